@@ -1,0 +1,119 @@
+"""A checked contract: a payoff with its terms filled in, dates still as rules."""
+
+from __future__ import annotations
+
+import datetime
+from dataclasses import dataclass
+from typing import TypeAlias
+
+from mcx.checked.payoff import Payoff
+from mcx.faults import Place
+
+
+@dataclass(frozen=True, slots=True)
+class DayRef:
+    """A single date as written: a calendar date, a time in years (`0.25y`), or the name of another date term
+    (with a part such as 'last')."""
+
+    place: Place
+    date: datetime.date | None = None
+    time: float | None = None
+    term: str = ""
+    part: str = ""
+
+
+@dataclass(frozen=True, slots=True)
+class Period:
+    """A step of a date rule: `3 months`, `1 business day`, `2 weeks`. `unit`: business day, day, week, month, year."""
+
+    count: int
+    unit: str
+
+
+@dataclass(frozen=True, slots=True)
+class DayRule:
+    """`{from:, until:, every:}` for calendar dates, `{count:, until:}` (and `from: 0y`) for times."""
+
+    place: Place
+    until: DayRef
+    start: DayRef | None = None
+    every: Period | None = None
+    count: int | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class DayList:
+    """Dates listed one by one, or all dates of another `dates` term (a single DayRef with a name)."""
+
+    place: Place
+    days: tuple[DayRef, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Stretch:
+    """`{continuous: [from, until]}` as a value of a `watch` term."""
+
+    place: Place
+    start: DayRef
+    end: DayRef
+
+
+@dataclass(frozen=True, slots=True)
+class Figures:
+    """The value of a number, percent or level term: `rows[date][asset]`.
+
+    `per_date`: one row for each date of the term's schedule (else one row); `per_asset`: one entry for each asset of
+    the contract (else one entry).
+    """
+
+    rows: tuple[tuple[float, ...], ...]
+    place: Place
+    per_date: bool = False
+    per_asset: bool = False
+
+
+@dataclass(frozen=True, slots=True)
+class Word:
+    """The value of a `choice` or `asset` term, or of a flag ('true', 'false')."""
+
+    text: str
+    place: Place
+
+
+TermValue: TypeAlias = DayRef | DayRule | DayList | Stretch | Figures | Word
+
+
+@dataclass(frozen=True, slots=True)
+class BusinessDays:
+    """Which days are good (`holidays`: a financial calendar's name, or 'none' for weekends only) and how others roll
+    ('following', 'modified following', 'preceding')."""
+
+    holidays: str
+    roll: str
+    place: Place
+
+
+@dataclass(frozen=True, slots=True)
+class Contract:
+    """One trade. Exactly one of `notional` and `units` is given. `textbook` contracts use times, others dates."""
+
+    title: str
+    currency: str
+    assets: tuple[str, ...]
+    payoff: Payoff
+    terms: dict[str, TermValue]  # optional terms that were not stated are absent; defaults are filled in
+    place: Place
+    notional: float | None = None
+    units: float | None = None
+    start: DayRef | None = None
+    day_count: str = ""
+    settlement: Period | None = None
+    calendar: BusinessDays | None = None
+    textbook: bool = False
+    text: str = ""
+    assumptions: tuple[str, ...] = ()
+
+    @property
+    def size(self) -> float:
+        """Currency amount for one unit of payoff: the notional, or the number of units."""
+        return self.notional if self.notional is not None else self.units

@@ -1,0 +1,210 @@
+"""From files to a checked request: every contract, the market, and every fault of all documents at once.
+
+`request` gives what it could make of the files with the faults it found; `load` raises them. What no single document
+can show is checked here, by small functions in `CROSS_CHECKS`, each returning its own faults.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable
+from dataclasses import dataclass, replace
+from itertools import combinations
+from pathlib import Path
+
+from mcx.checked.contract import Contract
+from mcx.checked.library import Definitions, clashes, stands_for_shipped
+from mcx.checked.market import Market
+from mcx.checked.read_contract import read_contract
+from mcx.checked.read_market import read_market
+from mcx.checked.read_payoff import read_payoff
+from mcx.checked.reading import listed
+from mcx.faults import Fault, InputError, Place, did_you_mean
+from mcx.text.documents import read_documents
+from mcx.text.located import Document, Mapping, Node, Sequence
+
+NO_FUNDING = "no issuer funding spread: the amounts are discounted at the market's rates alone"
+
+
+@dataclass(frozen=True, slots=True)
+class Request:
+    """What was asked about: contracts in order of the files, the market if one was given, the definitions used or
+    given along, and all documents."""
+
+    contracts: tuple[Contract, ...]
+    market: Market | None
+    payoffs: tuple[Document, ...]
+    documents: tuple[Document, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Pair:
+    """A contract beside the market, with the documents that both come from."""
+
+    contract: Contract
+    market: Market
+    contract_body: Mapping
+    market_body: Mapping
+
+
+def load(files: Iterable[str | Path]) -> Request:
+    """The checked documents of the files; raises InputError with every fault found."""
+    made, faults = request(files)
+    if faults:
+        raise InputError(faults)
+    return made
+
+
+def request(files: Iterable[str | Path]) -> tuple[Request, list[Fault]]:
+    """The checked documents of the files as far as they are sound, and every fault found."""
+    documents, faults = read_documents(files)
+    return checked_request(documents, faults)
+
+
+def checked_request(documents: Iterable[Document], faults: Iterable[Fault] = ()) -> tuple[Request, list[Fault]]:
+    """As `request`, from documents that are read already."""
+    documents, faults = tuple(documents), list(faults)
+    kinds: dict[str, list[Document]] = {}
+    for document in documents:
+        kinds.setdefault(document.kind, []).append(document)
+    own = kinds.get("payoff", [])
+    definitions = Definitions(own)
+    faults += clashes(own) + _only_one_market(kinds.get("market", [])) + _same_title(kinds.get("contract", []))
+    used: dict[str, Document] = {}
+    contracts: list[tuple[Contract, Mapping]] = []
+    for document in kinds.get("contract", []):
+        contract, wrong = read_contract(document, definitions)
+        faults += wrong
+        if contract:
+            used[contract.payoff.name] = definitions[contract.payoff.name]
+            contracts.append((_with_origin(contract, used[contract.payoff.name]), document.body))
+    for document in own:
+        if document not in used.values():
+            faults += read_payoff(document)[1]
+    market, markets = None, kinds.get("market", [])
+    for document in markets[:1]:
+        market, wrong = read_market(document)
+        faults += wrong
+    if market:
+        pairs = [Pair(contract, market, body, markets[0].body) for contract, body in contracts]
+        faults += [fault for pair in pairs for check in CROSS_CHECKS for fault in check(pair)]
+        contracts = [(_with_assumptions(pair), pair.contract_body) for pair in pairs]
+    payoffs = dict.fromkeys((*own, *used.values()))
+    made = Request(tuple(contract for contract, _ in contracts), market, tuple(payoffs), documents)
+    return made, sorted(set(faults))
+
+
+def _only_one_market(markets: list[Document]) -> list[Fault]:
+    first = [document.body.key("market").place for document in markets[:1]]
+    return [Fault(document.body.key("market").place, f"a second market; the first stands at {first[0]}")
+            for document in markets[1:]]
+
+
+def _same_title(contracts: list[Document]) -> list[Fault]:
+    seen: dict[str, Place] = {}
+    faults = []
+    for document in contracts:
+        node = document.body.get("contract")
+        title = " ".join(getattr(node, "text", "").split())
+        if title in seen:
+            faults.append(Fault(node.place, f"the contract '{title}' stands at {seen[title]} already; in one call every "
+                                            f"contract needs its own title"))
+        elif title:
+            seen[title] = node.place
+    return faults
+
+
+def _with_origin(contract: Contract, definition: Document) -> Contract:
+    """The contract with a word about a definition of the user's own that stands for a shipped one."""
+    if not stands_for_shipped(definition):
+        return contract
+    payoff = contract.payoff
+    said = f"'{payoff.name}' is defined at {payoff.place}; the shipped definition of that name is not used"
+    return replace(contract, assumptions=(*contract.assumptions, said))
+
+
+def _with_assumptions(pair: Pair) -> Contract:
+    """The contract with what is assumed because the market does not say it."""
+    contract = pair.contract
+    if contract.units is None or contract.currency in pair.market.funding:
+        return contract
+    return replace(contract, assumptions=(*contract.assumptions, NO_FUNDING))
+
+
+def _place(body: Mapping, key: str) -> Place:
+    node: Node | None = body.get(key)
+    return node.place if node is not None else body.place
+
+
+def one_kind_of_time(pair: Pair) -> list[Fault]:
+    """Textbook contracts go with textbook markets, calendar contracts with dated ones."""
+    if pair.contract.textbook == (pair.market.valuation is None):
+        return []
+    uses = "times, and needs a market that begins 'market: 0y'" if pair.contract.textbook else \
+        "calendar dates, and needs a market of a date"
+    return [Fault(_place(pair.market_body, "market"), f"'{pair.contract.title}' uses {uses}")]
+
+
+def rates_known(pair: Pair) -> list[Fault]:
+    """The market has rates for the contract's currency."""
+    currency, rates = pair.contract.currency, pair.market.rates
+    if currency in rates:
+        return []
+    text = f"the market has no rates for '{currency}'; it has {listed(rates)}"
+    return [Fault(_place(pair.contract_body, "currency"), text)]
+
+
+def funding_stated(pair: Pair) -> list[Fault]:
+    """A note's funding spread is stated, be it nil."""
+    currency = pair.contract.currency
+    if pair.contract.notional is None or currency in pair.market.funding:
+        return []
+    text = (f"no funding spread for '{currency}', the currency of the note '{pair.contract.title}'; write 'funding: "
+            f"{{{currency}: 0 bp}}' to value it without the issuer's spread")
+    return [Fault(_place(pair.market_body, "funding" if "funding" in pair.market_body else "market"), text)]
+
+
+def assets_known(pair: Pair) -> list[Fault]:
+    """Every asset of the contract is in the market, in the contract's currency."""
+    faults = []
+    nodes = pair.contract_body.get("assets")
+    places = [node.place for node in nodes] if isinstance(nodes, Sequence) else []
+    for name, place in zip(pair.contract.assets, places, strict=True):
+        asset = pair.market.assets.get(name)
+        if asset is None:
+            near = did_you_mean(name, pair.market.assets) or f"; it has {listed(pair.market.assets)}"
+            faults.append(Fault(place, f"the market has no asset '{name}'{near}"))
+        elif asset.currency and asset.currency != pair.contract.currency:
+            text = (f"'{name}' is quoted in {asset.currency}, but '{pair.contract.title}' pays in "
+                    f"{pair.contract.currency}; paying in another currency (quanto) belongs to a later version")
+            faults.append(Fault(asset.place, text))
+    return faults
+
+
+def correlations_known(pair: Pair) -> list[Fault]:
+    """Every pair of the contract's assets has its correlation, and together they make a correlation matrix."""
+    market, assets = pair.market, pair.contract.assets
+    known = [name for name in assets if name in market.assets]
+    place = _place(pair.market_body, "correlation" if "correlation" in pair.market_body else "market")
+    missing = [f"{a}/{b}" for a, b in combinations(known, 2)
+               if (a, b) not in market.correlation and (b, a) not in market.correlation]
+    if missing:
+        return [Fault(place, f"no correlation for {listed(missing)}")]
+    if len(known) < 3:
+        return []
+    from mcx.checked.nearest_correlation import nearest_correlation, smallest_eigenvalue
+
+    rows = [[1.0 if a == b else (market.correlation.get((a, b)) or market.correlation[b, a]).value for b in known]
+            for a in known]
+    smallest = smallest_eigenvalue(rows)
+    if smallest >= 0:
+        return []
+    nearest = nearest_correlation(rows)
+    told = ", ".join(f"{a}/{b}: {100 * nearest[i][j]:.4f}%"
+                     for (i, a), (j, b) in combinations(enumerate(known), 2))
+    return [Fault(place, f"no assets can be correlated like this (the smallest eigenvalue of the matrix is "
+                         f"{smallest:.3g}); the nearest correlations that can be: {told}")]
+
+
+CROSS_CHECKS: tuple[Callable[[Pair], list[Fault]], ...] = (
+    one_kind_of_time, rates_known, funding_stated, assets_known, correlations_known,
+)

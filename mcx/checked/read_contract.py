@@ -1,0 +1,217 @@
+"""From a `contract:` document to a `Contract`: a payoff's terms filled in, and everything stated that it needs.
+
+Contracts with calendar dates must state start, settlement and calendar; textbook contracts use times and none of
+these. Read `read_contract` first; the values of the terms are read in `term_values.py`.
+"""
+
+from __future__ import annotations
+
+import datetime
+from collections.abc import Mapping as MappingOf
+from dataclasses import replace
+from types import MappingProxyType
+
+from mcx.checked.contract import BusinessDays, Contract, DayRef, DayRule, Period, TermValue
+from mcx.checked.formula import Formula, Name, walk
+from mcx.checked.payoff import Assign, Pay, Payoff
+from mcx.checked.read_payoff import read_payoff
+from mcx.checked.reading import check_keys, items_of, listed, mapping_of, one_of, read, text_of, value_of
+from mcx.checked.term_values import TermReader
+from mcx.checked.values import amount, asset_name, currency_code
+from mcx.faults import Fault, did_you_mean
+from mcx.text.located import Document, Mapping, Node, Scalar
+from mcx.text.scalars import date, expected, period, word
+
+KEYS = ("contract", "currency", "notional", "units", "assets", "start", "day_count", "settlement", "calendar", "payoff",
+        "terms")
+CALENDAR_KEYS = ("start", "day_count", "settlement", "calendar")  # not for textbook contracts
+LATER = ("happened", "fixings", "dividends", "quanto", "adjustments", "rounding", "disruption")
+ROLLS = ("following", "modified following", "preceding")
+
+# The names of 2006 ISDA Definitions, section 4.16, each with the one that `dates/day_counts.py` uses.
+DAY_COUNTS: MappingProxyType[str, str] = MappingProxyType({
+    name: names[0]
+    for names in (
+        ("Actual/Actual (ISDA)", "Actual/Actual", "Act/Act (ISDA)", "Act/Act"),
+        ("Actual/365 (Fixed)", "Act/365 (Fixed)", "A/365 (Fixed)", "A/365F"),
+        ("Actual/360", "Act/360", "A/360"),
+        ("30/360", "360/360", "Bond Basis"),
+        ("30E/360", "Eurobond Basis"),
+    )
+    for name in names
+})
+
+
+def read_contract(
+    document: Document, definitions: MappingOf[str, Document]
+) -> tuple[Contract | None, list[Fault]]:
+    """The contract that a document says, None if anything is wrong with it; `definitions` gives payoffs by name."""
+    body, faults = document.body, []
+    check_keys(body, KEYS, ("contract", "currency", "assets", "payoff", "terms"), faults, "the contract", LATER)
+    size = _size(body, faults)
+    assets = asset_names(body.get("assets"), faults)
+    payoff = _payoff(body, definitions, assets, faults)
+    start = read(body, "start", _start, faults)
+    settlement = read(body, "settlement", _settlement, faults)
+    day_count = read(body, "day_count", _day_count, faults)
+    calendar = _calendar(body.get("calendar"), faults)
+    terms = mapping_of(body.get("terms"), faults, "terms and their values")
+    values, textbook = {}, False
+    if payoff:
+        reader = TermReader(payoff, assets, faults)
+        values = reader.read(terms, body.place)
+        textbook = _is_textbook(reader.written)
+        _check_times(reader.written, textbook, values, faults)
+        _check_calendar_keys(body, textbook, payoff, faults)
+    title, currency = text_of(body, "contract", faults), read(body, "currency", currency_code, faults)
+    if faults or payoff is None:
+        return None, faults
+    return Contract(
+        title=title, currency=currency, assets=assets, payoff=_begun(payoff, values), terms=values,
+        place=body.get("contract").place, notional=size.get("notional"), units=size.get("units"), start=start,
+        day_count=day_count or "", settlement=settlement, calendar=calendar, textbook=textbook, text=document.text,
+    ), []
+
+
+def asset_names(node: Node | None, faults: list[Fault]) -> tuple[str, ...]:
+    """The contract's assets in its own order; () where any of them is wrong."""
+    items = items_of(node, faults, "a list of assets, as '[harbour]'")
+    if node is not None and not items:
+        faults.append(expected("a list of assets, as '[harbour]'", node))
+    names: list[str] = []
+    sound = True
+    for item in items:
+        name = value_of(item, asset_name, faults)
+        if name in names:
+            faults.append(Fault(item.place, f"'{name}' stands twice in 'assets'"))
+        sound = sound and name is not None and name not in names
+        names.append(name)
+    return tuple(names) if sound else ()
+
+
+def _size(body: Mapping, faults: list[Fault]) -> dict[str, float]:
+    """The notional or the number of units, exactly one of them."""
+    stated = [key for key in ("notional", "units") if key in body]
+    if len(stated) == 2:
+        faults.append(Fault(body.key("units").place, "a contract has a 'notional' (payments are multiples of it) or "
+                                                     "'units' (payments are money per unit), not both"))
+    elif not stated:
+        faults.append(Fault(body.place, "'notional' (payments are multiples of it) or 'units' (payments are money per "
+                                        "unit) is missing in the contract"))
+    return {key: read(body, key, amount, faults) for key in stated}
+
+
+def _payoff(
+    body: Mapping, definitions: MappingOf[str, Document], assets: tuple[str, ...], faults: list[Fault]
+) -> Payoff | None:
+    """The definition that the contract names, checked for its assets."""
+    name = read(body, "payoff", word, faults)
+    if name is None:
+        return None
+    if name not in definitions:
+        near = did_you_mean(name, definitions) or f"; expected one of {listed(definitions)}"
+        faults.append(Fault(body.get("payoff").place, f"there is no payoff '{name}'{near}"))
+        return None
+    payoff, wrong = read_payoff(definitions[name], assets=len(assets) or None, asset_names=assets)
+    faults += wrong
+    if payoff and assets:
+        fewest, most = payoff.assets
+        if len(assets) < fewest or (most is not None and len(assets) > most):
+            wanted = str(fewest) if most == fewest else f"{fewest} or more" if most is None else f"{fewest} to {most}"
+            text = f"'{name}' takes {wanted} asset{'' if wanted == '1' else 's'}, found {len(assets)}"
+            faults.append(Fault(body.get("assets").place, text))
+            return None
+    return payoff
+
+
+def _start(node: Node) -> DayRef | Fault:
+    day = date(node)
+    return day if isinstance(day, Fault) else DayRef(node.place, date=day)
+
+
+def _settlement(node: Node) -> Period | Fault:
+    found = period(node)
+    if isinstance(found, Fault) or found[1] != "business day":
+        return expected("a number of business days, as '2 business days'", node)
+    return Period(*found)
+
+
+def _day_count(node: Node) -> str | Fault:
+    if isinstance(node, Scalar) and node.text in DAY_COUNTS:
+        return DAY_COUNTS[node.text]
+    near = did_you_mean(node.text, DAY_COUNTS) if isinstance(node, Scalar) else ""
+    names = listed(dict.fromkeys(DAY_COUNTS.values()), "or")
+    return expected(f"a day count: {names}", node, near.removeprefix("; "))
+
+
+def _calendar(node: Node | None, faults: list[Fault]) -> BusinessDays | None:
+    mapping = mapping_of(node, faults, "'{holidays: ECB, roll: modified following}'")
+    if mapping is None or not check_keys(mapping, (), ("holidays", "roll"), faults, "the calendar"):
+        return None
+    holidays = read(mapping, "holidays", word, faults)
+    roll = one_of(mapping.get("roll"), ROLLS, faults, "a roll convention")
+    if holidays is None or roll is None:
+        return None
+    return BusinessDays(holidays, roll, mapping.get("holidays").place)
+
+
+def _is_textbook(written: list[DayRef]) -> bool:
+    """Times and no dates make a textbook contract."""
+    return any(ref.time is not None for ref in written) and not any(ref.date for ref in written)
+
+
+def _check_times(written: list[DayRef], textbook: bool, values: dict[str, TermValue], faults: list[Fault]) -> None:
+    """Calendar dates and times in one contract, and rules that do not fit the kind of contract."""
+    first: datetime.date | None = next((ref.date for ref in written if ref.date), None)
+    for ref in written:
+        if ref.time is not None and first:
+            faults.append(Fault(ref.place, f"this is a time, but the contract uses calendar dates such as {first}; it "
+                                           f"may use the one or the other"))
+    for value in values.values():
+        if not isinstance(value, DayRule):
+            continue
+        if not textbook and value.count is not None:
+            faults.append(Fault(value.place, "equal steps ('count') are for times; with calendar dates write "
+                                             "'{from: ..., until: ..., every: 3 months}'"))
+        elif not textbook and value.start is None:
+            faults.append(Fault(value.place, "'from' is missing in the date rule"))
+        elif textbook and value.every and value.every.unit not in ("month", "year"):
+            faults.append(Fault(value.place, f"a step of {value.every.unit}s needs calendar dates; with times write "
+                                             f"months or years, or '{{count: 52, until: 1y}}'"))
+
+
+def _check_calendar_keys(body: Mapping, textbook: bool, payoff: Payoff, faults: list[Fault]) -> None:
+    """Start, settlement and calendar stand in calendar contracts, and in no other; the day count where it is used."""
+    if textbook:
+        for key in CALENDAR_KEYS:
+            if key in body:
+                faults.append(Fault(body.key(key).place, f"'{key}' belongs to contracts with calendar dates; this one "
+                                                         f"uses times"))
+        return
+    for key in ("start", "settlement", "calendar"):
+        if key not in body:
+            faults.append(Fault(body.place, f"'{key}' is missing in the contract"))
+    if "day_count" not in body and _uses_period(payoff):
+        faults.append(Fault(body.place, f"'day_count' is missing in the contract: '{payoff.name}' pays by 'period'"))
+
+
+def _uses_period(payoff: Payoff) -> bool:
+    actions = [action for event in payoff.events for action in (*event.then, *event.otherwise)]
+    formulas: list[Formula | None] = [let.formula for let in payoff.lets]
+    formulas += [formula for running in payoff.running for formula in (running.formula, running.start)]
+    formulas += [event.condition for event in payoff.events]
+    formulas += [action.amount for action in actions if isinstance(action, Pay)]
+    formulas += [right for action in actions if isinstance(action, Assign) for _, right in action.values]
+    parts = (part for formula in formulas if formula is not None for part in walk(formula))
+    return any(isinstance(part, Name) and part.name == "period" for part in parts)
+
+
+def _begun(payoff: Payoff, values: dict[str, TermValue]) -> Payoff:
+    """The payoff with no `start` where that names an optional term that this contract does not state."""
+    optional = {term.name for term in payoff.terms}
+    running = tuple(
+        replace(one, start=None)
+        if isinstance(one.start, Name) and one.start.name in optional and one.start.name not in values else one
+        for one in payoff.running
+    )
+    return replace(payoff, running=running)

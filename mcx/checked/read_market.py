@@ -1,0 +1,134 @@
+"""From a `market:` document to a `Market`: everything observed on the valuation date, each number as it was stated.
+
+Curves and single numbers are read in `curves.py`. What needs a contract to be judged (is every asset there, does the
+correlation matrix hold) is checked in `load.py`.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable
+from typing import TypeVar
+
+from mcx.checked.curves import MarketReader, correlation, valuation_of
+from mcx.checked.market import AssetMarket, Curve, Market, Quoted
+from mcx.checked.reading import check_keys, mapping_of, read, text_of, value_of
+from mcx.checked.values import amount, asset_name, currency_code
+from mcx.faults import Fault, did_you_mean
+from mcx.text.located import Document, Mapping, Node, Scalar
+from mcx.text.scalars import expected, percent
+
+T = TypeVar("T")
+
+KEYS = ("funding", "correlation", "uncertainty", "source", "as_of")
+LATER = ("fixings", "dividends", "quanto", "adjustments", "fx", "borrow")
+ASSET_LATER = ("dividends", "quanto", "adjustments", "fixings", "borrow", "strikes", "skew")
+UNCERTAIN = ("rates", "funding", "spot", "yield", "forwards", "vol", "correlation")
+
+
+def read_market(document: Document) -> tuple[Market | None, list[Fault]]:
+    """The market that a document says, None if anything is wrong with it."""
+    body, faults = document.body, []
+    valuation, textbook = valuation_of(body.get("market"), faults)
+    reader = MarketReader(valuation, textbook, faults)
+    check_keys(body, KEYS, ("market", "rates", "assets"), faults, "the market", LATER)
+    rates = _by_currency(reader, body.get("rates"), "rates by currency, as '{EUR: 2.1%}'", factors=True)
+    funding = _by_currency(reader, body.get("funding"), "funding spreads by currency, as '{EUR: 80 bp}'")
+    named = mapping_of(body.get("assets"), faults, "assets by name") or Mapping((), body.place)
+    assets = _each(named, lambda name, node: _asset(reader, name, node))
+    if "assets" in body and not named.entries:
+        faults.append(expected("assets by name", body.get("assets"), "there is none"))
+    market = Market(
+        valuation=valuation, rates=rates, funding=funding, assets=assets,
+        correlation=_correlations(reader, body.get("correlation"), named.keys()),
+        uncertainty=_uncertainty(reader, body.get("uncertainty")), place=body.get("market").place,
+        source=text_of(body, "source", faults), as_of=text_of(body, "as_of", faults), keys=body.keys(),
+    )
+    return (None if faults else market), faults
+
+
+def _each(mapping: Mapping, parse: Callable[[Scalar, Node], T | None]) -> dict[str, T]:
+    """What `parse` makes of each entry, those left out for which it gives None."""
+    found = {key.text: parse(key, node) for key, node in mapping.entries}
+    return {name: value for name, value in found.items() if value is not None}
+
+
+def _by_currency(
+    reader: MarketReader, node: Node | None, what: str, factors: bool = False
+) -> dict[str, Curve]:
+    """A curve of zero rates, or spreads to them, for each currency."""
+    mapping = mapping_of(node, reader.faults, what)
+    if mapping is None:
+        return {}
+    if not mapping.entries:
+        reader.faults.append(expected(what, mapping, "there is none"))
+
+    def curve(key: Scalar, value: Node) -> Curve | None:
+        value_of(key, currency_code, reader.faults)
+        return reader.curve(value, "zero", factors)
+
+    return _each(mapping, curve)
+
+
+def _asset(reader: MarketReader, name: Scalar, node: Node) -> AssetMarket | None:
+    """Spot, currency, vol, and either a yield or forwards."""
+    faults, what = reader.faults, f"the asset '{name}'"
+    before = len(faults)
+    value_of(name, asset_name, faults)
+    if not isinstance(node, Mapping):
+        faults.append(expected("'{spot: ..., currency: ..., yield: ..., vol: ...}'", node))
+        return None
+    required = ("spot", "vol") if reader.textbook else ("spot", "currency", "vol")
+    check_keys(node, ("currency", "yield", "forwards"), required, faults, what, ASSET_LATER)
+    if "yield" in node and "forwards" in node:
+        faults.append(Fault(node.key("forwards").place, f"{what} has both 'yield' and 'forwards'; keep one"))
+    if not {"yield", "forwards", "dividends"} & set(node.keys()):
+        faults.append(Fault(node.place, f"'yield' or 'forwards' is missing in {what}; write 'yield: 0%' for none"))
+    curves = {key: reader.curve(node.get(key), form)
+              for key, form in (("vol", "vol"), ("yield", "zero"), ("forwards", "forward")) if key in node}
+    spot = reader.quoted(node.get("spot"), amount) if "spot" in node else None
+    currency = read(node, "currency", currency_code, faults) or ""
+    if len(faults) > before:
+        return None
+    return AssetMarket(name.text, spot, currency, curves["vol"], name.place, curves.get("yield"),
+                       curves.get("forwards"))
+
+
+def _correlations(
+    reader: MarketReader, node: Node | None, assets: Iterable[str]
+) -> dict[tuple[str, str], Quoted]:
+    """Each pair of assets once."""
+    faults, assets = reader.faults, tuple(assets)
+    mapping = mapping_of(node, faults, "correlations by pair, as '{harbour/lantern: 65%}'")
+    found: dict[tuple[str, str], Quoted] = {}
+    for key, value in mapping.entries if mapping else ():
+        quoted = reader.quoted(value, correlation)
+        names = tuple(part.strip() for part in key.text.split("/"))
+        if len(names) != 2:
+            faults.append(expected("a pair of assets, as 'harbour/lantern'", key))
+            continue
+        unknown = [name for name in names if name not in assets]
+        for name in unknown:
+            faults.append(Fault(key.place, f"'{name}' is no asset of the market{did_you_mean(name, assets)}"))
+        if names[0] == names[1] and not unknown:
+            faults.append(expected("two different assets", key))
+        elif names in found or names[::-1] in found:
+            faults.append(Fault(key.place, f"the correlation of '{names[0]}' and '{names[1]}' is given twice"))
+        elif quoted is not None:
+            found[names] = quoted
+    return found
+
+
+def _uncertainty(reader: MarketReader, node: Node | None) -> dict[str, Quoted]:
+    """90 % half-widths for all numbers of a kind."""
+    mapping = mapping_of(node, reader.faults, "half-widths by kind of number, as '{vol: 1.5%}'")
+    if mapping is None:
+        return {}
+    check_keys(mapping, UNCERTAIN, (), reader.faults, "the uncertainty", LATER)
+
+    def half_width(key: Scalar, value: Node) -> Quoted | None:
+        quoted = reader.quoted(value, percent)
+        if quoted is not None and quoted.value < 0:
+            reader.faults.append(expected("a half-width of 0 or more", value))
+        return quoted
+
+    return _each(mapping, half_width)

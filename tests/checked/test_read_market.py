@@ -1,0 +1,162 @@
+"""Market documents: what is read, and what is refused at which place with which words."""
+
+from __future__ import annotations
+
+from datetime import date
+
+import pytest
+
+from mcx.checked.market import Market
+from mcx.checked.read_market import read_market
+from mcx.text.documents import parse_documents
+
+WHOLE = """\
+market: 2026-12-01
+source: closing prices
+rates:
+  EUR: {1m: 2.0%, 1y: 2.1%, 2029-12-01: 2.35%}
+  USD: {discount_factors: {1y: 0.965, 2y: 0.93}}
+funding: {EUR: {value: 80 bp, uncertain: 25 bp, source: bond desk, as_of: 2026-12-01 16:00}}
+assets:
+  harbour: {spot: 4180.2, currency: EUR, yield: 2.4%, vol: {3m: 17%, 1y: 18%, 3y: 19%}}
+  lantern: {spot: {value: 801.1, uncertain: 2.5}, currency: EUR, forwards: {1y: 805, 2028-12-01: 810.5}, vol: 22%}
+correlation: {harbour/lantern: 65%}
+uncertainty: {vol: 1.5%, rates: 10 bp}
+"""
+
+
+def parsed(text: str) -> tuple[Market | None, list[str]]:
+    (document,), faults = parse_documents(text.encode(), "m.yaml")
+    assert faults == []
+    market, faults = read_market(document)
+    return market, [str(fault) for fault in sorted(faults)]
+
+
+def faults_of(old: str, new: str) -> list[str]:
+    """The faults of the whole market with one text put in place of another."""
+    assert WHOLE.count(old) == 1
+    market, faults = parsed(WHOLE.replace(old, new))
+    assert (market is None) == bool(faults)
+    return faults
+
+
+def test_a_whole_market():
+    """Every number is read in natural units with its place and what is said about it."""
+    market, faults = parsed(WHOLE)
+    assert faults == []
+    assert market.valuation == date(2026, 12, 1)
+    assert market.source == "closing prices"
+    assert [node.label for node in market.rates["EUR"].nodes] == ["1m", "1y", "2029-12-01"]
+    assert [node.time for node in market.rates["EUR"].nodes] == [31 / 365, 1.0, 1096 / 365]
+    assert [node.quoted.value for node in market.rates["EUR"].nodes] == [0.02, 0.021, 0.0235]
+    assert market.rates["USD"].form == "discount"
+    funding = market.funding["EUR"]
+    assert funding.flat
+    assert (funding.nodes[0].quoted.value, funding.nodes[0].quoted.uncertain) == (0.008, 0.0025)
+    assert (funding.nodes[0].quoted.source, funding.nodes[0].quoted.as_of) == ("bond desk", "2026-12-01 16:00")
+    lantern = market.assets["lantern"]
+    assert (lantern.spot.value, lantern.spot.uncertain, str(lantern.spot.place)) == (801.1, 2.5, "m.yaml:9:27")
+    assert lantern.dividend_yield is None
+    assert [(node.label, node.quoted.value) for node in lantern.forwards.nodes] == [("1y", 805), ("2028-12-01", 810.5)]
+    assert market.correlation["harbour", "lantern"].value == 0.65
+    assert market.uncertainty["vol"].value == 0.015
+
+
+def test_a_textbook_market():
+    """`market: 0y` has no valuation date, takes tenors as times, and need not state an asset's currency."""
+    market, faults = parsed("market: 0y\nrates: {EUR: {6m: 5%, 2y: 6%}}\nassets: {orchard: {spot: 100, yield: 0%, "
+                            "vol: 25%}}\n")
+    assert faults == []
+    assert market.valuation is None
+    assert [node.time for node in market.rates["EUR"].nodes] == [0.5, 2.0]
+    assert market.assets["orchard"].currency == ""
+
+
+@pytest.mark.parametrize("label", ["2027-12-01", "1w", "30d"])
+def test_no_dates_in_textbook_markets(label: str):
+    """A textbook market knows years and months only."""
+    _, faults = parsed(f"market: 0y\nrates: {{EUR: {{{label}: 5%}}}}\nassets: {{orchard: {{spot: 100, yield: 0%, "
+                       "vol: 25%}}\n")
+    assert faults == [f"m.yaml:2:15: expected a tenor in years or months, found '{label}'; a textbook market has no "
+                      "dates"]
+
+
+SLIPS = [
+    # a rate, vol or correlation without its unit
+    ("2.1%", "2.1", "4:23: expected a percentage with its unit, found '2.1'; write '2.1%'"),
+    ("vol: 22%", "vol: 0.22", "9:111: expected a percentage with its unit, found '0.22'; write '22%' or '0.22%'"),
+    ("vol: 22%", "vol: 22", "9:111: expected a percentage with its unit, found '22'; write '22%'"),
+    ("vol: 22%", "vol: 1800%", "9:111: expected a vol above 0% and up to 300%, found '1800%'; is the unit right?"),
+    ("vol: 22%", "vol: 0%", "9:111: expected a vol above 0% and up to 300%, found '0%'"),
+    ("vol: 22%", "vol: -5%", "9:111: expected a vol above 0% and up to 300%, found '-5%'"),
+    ("{1m: 2.0%,", "{1m: 250%,", "4:13: expected a rate from -50% to 100%, found '250%'; is the unit right?"),
+    ("yield: 2.4%", "yield: -90%", "8:49: expected a rate from -50% to 100%, found '-90%'; is the unit right?"),
+    ("65%", "165%", "10:32: expected a correlation from -100% to 100%, found '165%'"),
+    ("65%", "0.65", "10:32: expected a percentage with its unit, found '0.65'; write '65%' or '0.65%'"),
+    ("10 bp", "-10 bp", "11:33: expected a half-width of 0 or more, found '-10 bp'"),
+    ("uncertain: 2.5", "uncertain: 2.5%", "9:45: expected a half-width in the unit of the value, found '2.5%'"),
+    ("uncertain: 25 bp", "uncertain: 25", "6:42: expected a percentage with its unit, found '25'; write '25%'"),
+    # levels
+    ("4180.2", "0", "8:19: expected an amount above 0, found '0'"),
+    ("4180.2", "100%", "8:19: expected an amount of money, found '100%'; write it without a unit"),
+    ("4180.2", "4_180.2", "8:19: expected a number, found '4_180.2'; write '4180.2'"),
+    ("4180.2", ".inf", "8:19: expected a finite number, found '.inf'"),
+    ("{1y: 805, 2028-12-01: 810.5}", "805", "9:76: expected forwards by tenor or date, as '{1y: 4260.5}', found '805'"),
+    ("0.965", "-0.965", "5:32: expected a discount factor above 0 and up to 1.5, found '-0.965'"),
+    ("0.965", "96.5", "5:32: expected a discount factor above 0 and up to 1.5, found '96.5'"),
+    # curves
+    ("1y: 2.1%", "1w: 2.1%", "4:19: '1w' is not later than '1m'; a curve goes forward in time"),
+    ("1y: 2.1%", "1.3m: 2.1%", "4:19: expected a whole number of months or days, found '1.3m'"),
+    ("1y: 2.1%", "1yr: 2.1%", "4:19: expected a tenor such as '2w', '3m' or '1y', found '1yr'"),
+    ("1y: 2.1%", "9999y: 2.1%", "4:19: expected a tenor within the calendar's years, found '9999y'"),
+    ("1m: 2.0%", "2026-12-01: 2.0%",
+     "4:9: expected a date after the valuation date 2026-12-01, found '2026-12-01'"),
+    ("1m: 2.0%", "2026-02-30: 2.0%", "4:9: expected a day of the calendar, found '2026-02-30'"),
+    ("{3m: 17%, 1y: 18%, 3y: 19%}", "{1y: 18%, 3y: 10%}",
+     "8:74: total variance falls from 0.0324 at '1y' to 0.0300274 at '3y'; a vol of 10.3876% is the least that '3y' "
+     "can have"),
+    ("{3m: 17%, 1y: 18%, 3y: 19%}", "{}", "8:60: expected a number, or numbers by tenor or date, found a mapping; the "
+                                          "curve is empty"),
+    ("{3m: 17%, 1y: 18%, 3y: 19%}", "{1y: {90%: 20%, 100%: 18%}}",
+     "8:61: a vol by strike is a key of a later version and is refused rather than ignored"),
+    ("{value: 80 bp, uncertain: 25 bp, source: bond desk, as_of: 2026-12-01 16:00}", "{discount_factors: {1y: 0.9}}",
+     "6:17: discount factors stand for rates only"),
+    # names and keys
+    ("2026-12-01\nsource", "1 December 2026\nsource",
+     "1:9: expected the valuation date, or '0y' for textbook contracts, found '1 December 2026'"),
+    ("  USD", "  usd", "5:3: expected a currency code of three capital letters, as 'EUR', found 'usd'"),
+    ("correlation:", "corelation:", "10:1: 'corelation' is not a key of the market; did you mean 'correlation'?"),
+    ("harbour/lantern", "harbour/latern", "10:15: 'latern' is no asset of the market; did you mean 'lantern'?"),
+    ("harbour/lantern", "harbour", "10:15: expected a pair of assets, as 'harbour/lantern', found 'harbour'"),
+    ("harbour/lantern", "harbour/harbour", "10:15: expected two different assets, found 'harbour/harbour'"),
+    ("65%}", "65%, lantern/harbour: 65%}", "10:37: the correlation of 'lantern' and 'harbour' is given twice"),
+    ("yield: 2.4%, ", "", "8:12: 'yield' or 'forwards' is missing in the asset 'harbour'; write 'yield: 0%' for none"),
+    ("yield: 2.4%, ", "yield: 2.4%, forwards: {1y: 4200}, ",
+     "8:55: the asset 'harbour' has both 'yield' and 'forwards'; keep one"),
+    ("4180.2, currency: EUR", "4180.2", "8:12: 'currency' is missing in the asset 'harbour'"),
+    ("{vol: 1.5%", "{vols: 1.5%", "11:15: 'vols' is not a key of the uncertainty; did you mean 'vol'?"),
+    # later versions
+    ("source: closing prices", "fixings: {}",
+     "2:1: 'fixings' is a key of a later version and is refused rather than ignored"),
+    ("yield: 2.4%, ", "dividends: [], ",
+     "8:42: 'dividends' is a key of a later version and is refused rather than ignored"),
+    ("yield: 2.4%, ", "yield: 2.4%, quanto: {}, ",
+     "8:55: 'quanto' is a key of a later version and is refused rather than ignored"),
+]
+
+
+@pytest.mark.parametrize(("old", "new", "expected"), SLIPS, ids=[f"{new}" for _, new, _ in SLIPS])
+def test_slips(old: str, new: str, expected: str):
+    """One slip gives one fault, at its place, in words that say what was expected."""
+    assert faults_of(old, new) == [f"m.yaml:{expected}"]
+
+
+def test_all_faults_at_once():
+    """Faults in several parts of a market are reported together."""
+    _, faults = parsed(WHOLE.replace("2.1%", "2.1").replace("4180.2", "-1").replace("65%", "165%"))
+    assert [fault.split(": ")[0] for fault in faults] == ["m.yaml:4:23", "m.yaml:8:19", "m.yaml:10:32"]
+
+
+def test_the_least_vol_that_is_named_is_accepted():
+    """The vol that the message offers makes total variance rise."""
+    assert faults_of("{3m: 17%, 1y: 18%, 3y: 19%}", "{1y: 18%, 3y: 10.3876%}") == []
