@@ -1,0 +1,105 @@
+"""A contract with every date known: what happens on each date, in order, and when each amount is paid.
+
+This is the form that the tape is unrolled from, the readback is written from, and the plain second implementation in
+the tests walks along. `DatedContract` knows nothing of the market but the valuation date.
+"""
+
+from __future__ import annotations
+
+import datetime
+from dataclasses import dataclass
+
+from mcx.checked.contract import Contract
+from mcx.checked.payoff import Event, Pay, Running
+
+
+@dataclass(frozen=True, slots=True)
+class Day:
+    """A point in time: years from the valuation date (Actual/365 Fixed) and the date (None in textbook contracts)."""
+
+    time: float
+    date: datetime.date | None = None
+
+    def __str__(self) -> str:
+        return self.date.isoformat() if self.date else f"{self.time:.10g}y"
+
+
+@dataclass(frozen=True, slots=True)
+class Occasion:
+    """What a formula may ask about its date.
+
+    `schedule` names the dates term the date belongs to ('' for a single date); `nth` counts from 1 in the parent
+    schedule; `n_dates` is that schedule's length; `period` is the year fraction since the previous date of it (from
+    `start` on the first), by the contract's day count, nan where the contract has no start; `years` from the start.
+    `dates` maps every dates term that has this day among its dates to the position (from 0), for per-date terms.
+    `earlier` is the day of the previous occasion of the same running value or event, None on its first.
+    """
+
+    day: Day
+    schedule: str
+    nth: int
+    n_dates: int
+    period: float
+    years: float
+    dates: dict[str, int]
+    earlier: Day | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Update:
+    """A running value observed on a date. `first` on its first date. Continuous stretches are `Watch`es instead."""
+
+    running: Running
+    occasion: Occasion
+    first: bool
+
+
+@dataclass(frozen=True, slots=True)
+class Watch:
+    """A running value observed continuously from `start` to `end`; both ends belong to it."""
+
+    running: Running
+    start: Day
+    end: Day
+
+
+@dataclass(frozen=True, slots=True)
+class DatedEvent:
+    """An event on a date. `due` holds, for each Pay action inside it, when that amount is paid."""
+
+    event: Event
+    occasion: Occasion
+    due: dict[Pay, Day]
+
+
+@dataclass(frozen=True, slots=True)
+class Moment:
+    """All that happens on one day: first the running values, then the events, both in file order."""
+
+    day: Day
+    updates: tuple[Update, ...]
+    events: tuple[DatedEvent, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class DatedContract:
+    """Moments in order of time, and the continuous watches beside them.
+
+    `schedules` gives the days of every date, dates and (dated) watch term. `calendar_version` names the holiday
+    package and its version, '' where no holidays were asked for. `assumptions` are sentences to print with any value.
+    """
+
+    contract: Contract
+    valuation: datetime.date | None
+    start: Day | None
+    schedules: dict[str, tuple[Day, ...]]
+    moments: tuple[Moment, ...]
+    watches: tuple[Watch, ...]
+    calendar_version: str = ""
+    assumptions: tuple[str, ...] = ()
+
+    @property
+    def last(self) -> Day:
+        """The last day on which anything is observed."""
+        days = [moment.day for moment in self.moments] + [watch.end for watch in self.watches]
+        return max(days, key=lambda day: day.time)

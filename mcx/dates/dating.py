@@ -1,0 +1,247 @@
+"""From a contract to a dated contract: every observation and every payment on its day.
+
+`date_contract` is the door. Which day a date term means is worked out in `rules.py`; here schedules become occasions
+(with their numbers in the parent schedule), occasions become moments, and what only dates can show is found at fault.
+"""
+
+from __future__ import annotations
+
+import datetime
+import math
+from dataclasses import replace
+
+from mcx.checked.contract import Contract, DayList, DayRef, Figures, Stretch
+from mcx.checked.payoff import At, Continuous, Event, Pay, Running
+from mcx.checked.term_values import DATED_TYPES
+from mcx.dates.business_days import GoodDays, NotCovered, good_days
+from mcx.dates.dated_contract import Day, DatedContract, DatedEvent, Moment, Occasion, Update, Watch
+from mcx.dates.day_counts import YEAR_FRACTIONS
+from mcx.dates.readable import readings
+from mcx.dates.rules import TermDays, part_of
+from mcx.faults import Fault, Place
+
+WATCHABLE = ("lowest", "highest", "ever", "always")
+
+
+def date_contract(
+    contract: Contract, valuation: datetime.date | None
+) -> tuple[DatedContract | None, list[Fault]]:
+    """The contract with every date known, and the faults that only dates can show.
+
+    Times are years from `valuation`; without one, from the contract's start. Optional date terms that are not stated
+    narrow nothing, and nothing happens at them.
+    """
+    good, faults = good_days(contract.calendar) if contract.calendar else (None, [])
+    if faults:
+        return None, faults
+    base = None if contract.textbook else valuation or contract.start.date
+    terms = TermDays(contract, base, good)
+    stated = [term for term in contract.payoff.terms if term.name in contract.terms and term.type in DATED_TYPES]
+    schedules = {term.name: terms.of_term(term.name) for term in stated}
+    faults = terms.faults + _wrong_lengths(contract, schedules)
+    if faults:
+        return None, faults
+    start = Day(0.0) if contract.textbook else terms.day(contract.start.date)
+    return _Dating(contract, valuation, schedules, start, terms, good).dated()
+
+
+def _wrong_lengths(contract: Contract, schedules: dict[str, tuple[Day, ...]]) -> list[Fault]:
+    """Lists for each date of a schedule that do not have as many entries as the schedule has dates."""
+    faults = []
+    for term in contract.payoff.terms:
+        value, schedule = contract.terms.get(term.name), schedules.get(term.per, ())
+        if isinstance(value, Figures) and value.per_date:
+            count, what = len(value.rows), "numbers"
+        elif term.type == "dates" and term.per in contract.terms and value is not None:
+            count, what = len(schedules[term.name]), "dates"
+        else:
+            continue
+        if schedule and count and count != len(schedule):
+            text = (f"'{term.name}' has {count} {what}; '{term.per}' has {len(schedule)} dates, "
+                    f"{schedule[0]} to {schedule[-1]}")
+            faults.append(Fault(value.place, text))
+    return faults
+
+
+def _positions(contract: Contract, schedules: dict[str, tuple[Day, ...]]) -> dict[Day, dict[str, int]]:
+    """The terms of several dates that have a day among their dates, and where."""
+    found: dict[Day, dict[str, int]] = {}
+    for name, days in schedules.items():
+        if not isinstance(contract.terms[name], DayRef | Stretch):
+            for k, day in enumerate(days):
+                found.setdefault(day, {})[name] = k
+    return found
+
+
+class _Dating:
+    """One contract on its way to a dated one; collects faults as it goes."""
+
+    def __init__(self, contract: Contract, valuation: datetime.date | None, schedules: dict[str, tuple[Day, ...]],
+                 start: Day, terms: TermDays, good: GoodDays | None):
+        self.contract, self.payoff, self.valuation = contract, contract.payoff, valuation
+        self.schedules, self.start, self.terms, self.good = schedules, start, terms, good
+        self.positions = _positions(contract, schedules)
+        self.faults: list[Fault] = []
+        self.assumptions: list[str] = []
+        self.updates: dict[Day, list[Update]] = {}
+        self.events: dict[Day, list[DatedEvent]] = {}
+        self.watches: list[Watch] = []
+
+    def dated(self) -> tuple[DatedContract | None, list[Fault]]:
+        self._refuse_dates_before_start()
+        for running in self.payoff.running:
+            self._observe(running)
+        for event in self.payoff.events:
+            self._happen(event)
+        days = sorted({*self.updates, *self.events}, key=lambda day: day.time)
+        if not days and not self.faults:
+            self._fault(self.contract.place, "nothing is ever observed or paid: no event has a date")
+        if self.faults:
+            return None, self.faults
+        dated = DatedContract(
+            contract=self.contract, valuation=self.valuation, start=self.start, schedules=self.schedules,
+            moments=tuple(Moment(day, tuple(self.updates.get(day, ())), tuple(self.events.get(day, ())))
+                          for day in days),
+            watches=tuple(self.watches), calendar_version=self.good.version if self.good else "",
+            assumptions=(*self.contract.assumptions, *dict.fromkeys(self.assumptions)))
+        live, faults = readings(dated)
+        return (None if faults else _only(dated, live)), faults
+
+    def _fault(self, place: Place, text: str) -> None:
+        fault = Fault(place, text)
+        if fault not in self.faults:
+            self.faults.append(fault)
+
+    def _refuse_dates_before_start(self) -> None:
+        for name, days in self.schedules.items():
+            if days[0].time < self.start.time:
+                self._fault(self.contract.terms[name].place,
+                            f"{days[0]} lies before the contract's start {self.start}")
+
+    def _is_past(self, day: Day, name: str, what: str) -> bool:
+        """Whether a day is before the valuation date; then that is a fault of the term that gave it."""
+        if self.valuation is None or day.time >= 0:
+            return False
+        if day.time >= self.start.time:  # else that is the fault already
+            self._fault(self.contract.terms[name].place,
+                        f"{what}{day} lies before the valuation date {self.valuation}; "
+                        f"a seasoned trade needs fixings, which a later version reads")
+        return True
+
+    def _observe(self, running: Running) -> None:
+        """The days of a running value: updates on dates, or a continuous watch."""
+        at = running.at
+        if at is None:
+            return
+        if isinstance(at, Continuous):
+            self._watch(running, *(self._end(end) for end in (at.start, at.end)), at.start.name, at.place)
+            return
+        value = self.contract.terms.get(at.name)
+        if isinstance(value, Stretch):
+            if running.how not in WATCHABLE:
+                self._fault(value.place, f"'{running.name}' is the {running.how} of what it observes and cannot be "
+                                         f"watched continuously; {', '.join(WATCHABLE)} can")
+            else:
+                self._watch(running, *self.schedules[at.name], at.name, value.place)
+            return
+        for occasion in self._occasions(at):
+            update = Update(running, occasion, first=occasion.earlier is None)
+            self.updates.setdefault(occasion.day, []).append(update)
+
+    def _watch(self, running: Running, start: Day | None, end: Day | None, name: str, place: Place) -> None:
+        if start is None or end is None:  # an optional date that is not stated: nothing is watched
+            return
+        if end.time <= start.time:
+            self._fault(place, f"the watch ends on {end}, not after its start on {start}")
+        elif not self._is_past(start, name, "the start of the watch "):
+            self.watches.append(Watch(running, start, end))
+
+    def _end(self, at: At) -> Day | None:
+        days = part_of(self.schedules.get(at.name, ()), at.part)
+        return days[0] if days else None
+
+    def _happen(self, event: Event) -> None:
+        """The days of an event, and of every payment in it."""
+        if event.at.part == "once":
+            self._fault(event.at.place, "'once' needs the moment of a hit, which a later version reads")
+            return
+        occasions = self._occasions(event.at, event.since, event.until)
+        if not occasions and event.at.name in self.schedules:
+            narrowed = "".join(f" {word} '{name}'" for word, name in (("from", event.since), ("until", event.until))
+                               if name)
+            part = f".{event.at.part}" if event.at.part else ""
+            self.assumptions.append(f"'{event.name or 'the payment'}' never happens: "
+                                    f"no date of '{event.at.name}{part}'{narrowed}")
+        pays = [action for action in (*event.then, *event.otherwise) if isinstance(action, Pay)]
+        for occasion in occasions:
+            due = {pay: self._due(pay, occasion) for pay in pays}
+            self.events.setdefault(occasion.day, []).append(DatedEvent(event, occasion, due))
+
+    def _occasions(self, at: At, since: str = "", until: str = "") -> list[Occasion]:
+        """The dates of a schedule, or the part of them that is meant, numbered as in the whole schedule."""
+        days = self.schedules.get(at.name, ())
+        single = isinstance(self.contract.terms.get(at.name), DayRef)
+        first = self.schedules[since][0].time if since in self.schedules else -math.inf
+        last = self.schedules[until][0].time if until in self.schedules else math.inf
+        found: list[Occasion] = []
+        for k in part_of(range(len(days)), at.part):
+            day = days[k]
+            if not first <= day.time <= last or self._is_past(day, at.name, ""):
+                continue
+            found.append(Occasion(
+                day=day, schedule="" if single else at.name, nth=k + 1, n_dates=len(days),
+                period=self._fraction(days[k - 1] if k else self.start, day),
+                years=day.time - self.start.time if self.contract.textbook else _years(self.start, day),
+                dates=self.positions.get(day, {}), earlier=found[-1].day if found else None))
+        return found
+
+    def _fraction(self, before: Day, day: Day) -> float:
+        if self.contract.textbook:
+            return day.time - before.time
+        rule = YEAR_FRACTIONS.get(self.contract.day_count)
+        return rule(before.date, day.date) if rule else math.nan
+
+    def _due(self, pay: Pay, occasion: Occasion) -> Day:
+        """When an amount is paid."""
+        day, contract = occasion.day, self.contract
+        if pay.due == "same day":
+            return day
+        if pay.due not in self.schedules:
+            return self._after_lag(day, pay.place)
+        term = self.payoff.term(pay.due)
+        position = 0 if term.type == "date" else occasion.dates.get(term.per)
+        if position is None:
+            self._fault(pay.place, f"'{pay.due}' has one date for each date of '{term.per}', "
+                                   f"and {day} is none of them")
+            return day
+        due = self.schedules[pay.due][position]
+        if due.time < day.time:
+            value = contract.terms[pay.due]
+            place = value.days[position].place if isinstance(value, DayList) and len(value.days) > 1 else value.place
+            self._fault(place, f"the payment of what is observed on {day} falls due before, on {due}")
+        return due
+
+    def _after_lag(self, day: Day, place: Place) -> Day:
+        if self.contract.settlement is None:
+            return day
+        try:
+            return self.terms.day(self.good.add(day.date, self.contract.settlement.count))
+        except NotCovered as beyond:
+            self._fault(place, f"the payment of {day}: {beyond}")
+            return day
+
+
+def _only(dated: DatedContract, live: frozenset[str]) -> DatedContract:
+    """Without the running values that nothing reads: they are not observed."""
+    moments = (replace(moment, updates=tuple(update for update in moment.updates if update.running.name in live))
+               for moment in dated.moments)
+    moments = tuple(moment for moment in moments if moment.updates or moment.events)
+    watches = tuple(watch for watch in dated.watches if watch.running.name in live)
+    today = [f"the observation on {moment.day}, the valuation date, uses the market's spot" for moment in moments[:1]
+             if moment.day.date and moment.day.date == dated.valuation]
+    return replace(dated, moments=moments, watches=watches, assumptions=(*dated.assumptions, *today))
+
+
+def _years(start: Day, day: Day) -> float:
+    """Years between two dates, Actual/365 (Fixed)."""
+    return YEAR_FRACTIONS["Actual/365 (Fixed)"](start.date, day.date)

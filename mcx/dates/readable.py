@@ -1,0 +1,286 @@
+"""What formulas read on their dates: every name must have its value when it is asked for.
+
+Since all dates are known, this is decided before anything is drawn. The walk below follows the moments in order, knows
+which running values have begun, and of each conditional that the terms settle reads only the branch that is taken.
+What it finds is kept by reader (an event or a running value), so that running values that nothing reads can be left out.
+"""
+
+from __future__ import annotations
+
+import math
+import operator
+from collections.abc import Callable
+from dataclasses import dataclass, field
+from types import MappingProxyType
+
+from mcx.checked.contract import Figures, Word
+from mcx.checked.formula import (
+    Binary,
+    Call,
+    ChoiceIs,
+    Formula,
+    Given,
+    IfElse,
+    Name,
+    Number,
+    OfAsset,
+    Previous,
+    Unary,
+    children,
+)
+from mcx.checked.payoff import Assign, At, End, Event, Pay, Running
+from mcx.dates.dated_contract import DatedContract, DatedEvent, Occasion
+from mcx.faults import Fault, Place
+
+KNOWN_OF_DATE = ("nth", "n_dates", "years", "period")
+SAME_OF_ONE = ("worst", "best", "mean", "any", "all")  # of one number for every asset: that number
+ARITHMETIC: MappingProxyType[str, Callable[[float, float], float]] = MappingProxyType({
+    "+": operator.add, "-": operator.sub, "*": operator.mul, "/": operator.truediv, "<": operator.lt,
+    "<=": operator.le, ">": operator.gt, ">=": operator.ge, "==": operator.eq, "!=": operator.ne,
+})
+UNUSED_MATTERS = ("number", "percent", "level", "choice", "flag", "asset")
+
+
+@dataclass(slots=True)
+class Seen:
+    """What one event or running value read: names of terms and running values, and what was wrong, by name."""
+
+    terms: set[str] = field(default_factory=set)
+    running: set[str] = field(default_factory=set)
+    wrong: dict[str, Fault] = field(default_factory=dict)
+
+
+def readings(dated: DatedContract) -> tuple[frozenset[str], list[Fault]]:
+    """The running values that payments depend on, and the faults of reading: names without a value where they are
+    read, and optional terms that the contract states but nothing reads."""
+    walk = _Walk(dated)
+    walk.along()
+    payoff, contract = dated.contract.payoff, dated.contract
+    live: set[str] = set()
+    queue = [walk.seen[event.place] for event in payoff.events if event.place in walk.seen]
+    counted = Seen()
+    while queue:
+        seen = queue.pop()
+        counted.terms |= seen.terms
+        counted.wrong |= {name: fault for name, fault in seen.wrong.items() if name not in counted.wrong}
+        for running in payoff.running:
+            if running.name in seen.running and running.name not in live:
+                live.add(running.name)
+                queue += [walk.seen[running.place]] if running.place in walk.seen else []
+    faults = list(counted.wrong.values())
+    for term in payoff.terms:
+        if term.optional and term.type in UNUSED_MATTERS and term.name in contract.terms:
+            if term.name not in counted.terms and not faults:
+                faults.append(Fault(contract.terms[term.name].place,
+                                    f"'{term.name}' is stated, but with these terms '{payoff.name}' never reads it"))
+    return frozenset(live), sorted(faults)
+
+
+class _Walk:
+    """A walk along the moments with what is known on every path; `ready` holds the running values that have begun."""
+
+    def __init__(self, dated: DatedContract):
+        self.dated, self.contract = dated, dated.contract
+        payoff = self.contract.payoff
+        self.lets = {let.name: let.formula for let in payoff.lets}
+        self.running = {running.name: running for running in payoff.running}
+        self.order = {name: k for k, name in enumerate(self.running)}
+        self.terms = {term.name: term for term in payoff.terms}
+        self.ready = {running.name for running in payoff.running if running.start is not None}
+        self.seen: dict[Place, Seen] = {}
+        self.remembered: dict[tuple[Place, Place], Seen] = {}  # what each `previous` read on the date before
+        self.occasion: Occasion | None = None
+        self.owner = Seen()
+        self.owner_place: Place | None = None
+
+    def along(self) -> None:
+        for running in self.running.values():
+            if running.start is not None:
+                self._look(running, None)
+                self._read(running.start)
+        for watch in self.dated.watches:
+            self._look(watch.running, None)
+            self._read(watch.running.formula)
+        for moment in self.dated.moments:
+            for update in moment.updates:
+                self._begin_watches(moment.day.time, self.order[update.running.name])
+                self._look(update.running, update.occasion)
+                self._read(update.running.formula)
+                self._remember(update.running.formula)
+                self.ready.add(update.running.name)
+            self._begin_watches(moment.day.time, len(self.order))
+            if any([self._happen(event) for event in moment.events]):
+                break
+
+    def _begin_watches(self, time: float, before: int) -> None:
+        """Continuous watches that have begun; of those that begin now, the ones that stand above in the file."""
+        self.ready |= {watch.running.name for watch in self.dated.watches if watch.start.time < time
+                       or (watch.start.time == time and self.order[watch.running.name] < before)}
+
+    def _look(self, owner: Running | Event, occasion: Occasion | None) -> None:
+        self.owner, self.owner_place = self.seen.setdefault(owner.place, Seen()), owner.place
+        self.occasion = occasion
+
+    def _happen(self, dated_event: DatedEvent) -> bool:
+        """Reads an event; True if it ends the contract on every path."""
+        event = dated_event.event
+        self._look(event, dated_event.occasion)
+        holds = self._read(event.condition) if event.condition is not None else 1.0
+        self._remember(*_formulas(event))
+        taken = [*event.then] if holds is None or holds else []
+        taken += [] if holds else event.otherwise
+        for action in taken:
+            if isinstance(action, Pay):
+                self._read(action.amount)
+            elif isinstance(action, Assign):
+                for _, right in action.values:
+                    self._read(right)
+                self.ready |= {name for name, _ in action.values}
+            else:
+                break
+        return bool(holds) and any(isinstance(action, End) for action in event.then)
+
+    def _read(self, formula: Formula) -> float | None:
+        """Reads a formula; its value where that is the same on every path and for every asset, else None."""
+        match formula:
+            case Number(value=value):
+                return value
+            case Name():
+                return self._name(formula)
+            case Given(term=term):
+                return float(term in self.contract.terms)
+            case ChoiceIs(term=term, word=word, negated=negated):
+                stated = self._word(term, formula.place)
+                return None if stated is None else float((stated == word) != negated)
+            case OfAsset(asset=asset):
+                if asset not in self.contract.assets:
+                    self._word(asset, formula.place)
+                return self._read(formula.operand)
+            case Binary(symbol="and" | "or" as symbol):
+                left = self._read(formula.left)
+                if left is not None and bool(left) is (symbol == "or"):
+                    return left
+                right = self._read(formula.right)
+                return right if left is not None else None
+            case IfElse():
+                condition = self._read(formula.condition)
+                if condition is not None:
+                    return self._read(formula.yes if condition else formula.no)
+                self._read(formula.yes)
+                self._read(formula.no)
+                return None
+            case Previous():
+                return self._previous(formula)
+        return _folded(formula, [self._read(part) for part in children(formula)])
+
+    def _name(self, formula: Name) -> float | None:
+        name, place = formula.name, formula.place
+        if name in self.lets:
+            return self._read(self.lets[name])
+        if name in self.running:
+            self.owner.running.add(name)
+            if name not in self.ready:
+                self._not_begun(self.running[name], place)
+        elif name in self.terms:
+            return self._term(name, place)
+        elif name in KNOWN_OF_DATE:
+            known = getattr(self.occasion, name, math.nan)
+            if not math.isnan(known):
+                return known
+            self.owner.wrong.setdefault(name, Fault(place, f"'{name}' is not known here: it belongs to a date"))
+        return None
+
+    def _term(self, name: str, place: Place) -> float | None:
+        stated = self.contract.terms.get(name)
+        if stated is None:
+            self._not_stated(name, place)
+            return None
+        self.owner.terms.add(name)
+        if isinstance(stated, Word):
+            return float(stated.text == "true")
+        if isinstance(stated, Figures) and stated.per_date:
+            per = self.terms[name].per
+            if self.occasion is None or per not in self.occasion.dates:
+                where = f"is read{self._on}, which is none of them" if self.occasion else "is read between them"
+                text = f"'{name}' has one value for each date of '{per}' and {where} ({place})"
+                self.owner.wrong.setdefault(name, Fault(stated.place, text))
+        return None
+
+    def _word(self, term: str, place: Place) -> str | None:
+        if term in self.contract.terms:
+            self.owner.terms.add(term)
+            return self.contract.terms[term].text
+        self._not_stated(term, place)
+        return None
+
+    def _previous(self, formula: Previous) -> float | None:
+        if self.occasion is None or self.occasion.earlier is None:
+            return self._read(formula.first)
+        before = self.remembered[self.owner_place, formula.place]
+        self.owner.terms |= before.terms
+        self.owner.running |= before.running
+        self.owner.wrong = before.wrong | self.owner.wrong
+        return None
+
+    def _remember(self, *formulas: Formula) -> None:
+        """What each `previous` will ask for on the next date, read today."""
+        for part in self._previous_in(formulas):
+            owner, self.owner = self.owner, Seen()
+            self._read(part.operand)
+            self.remembered[self.owner_place, part.place], self.owner = self.owner, owner
+
+    def _previous_in(self, formulas: tuple[Formula, ...]) -> list[Previous]:
+        found = []
+        for formula in formulas:
+            if isinstance(formula, Previous):
+                found.append(formula)
+            inner = self.lets.get(formula.name) if isinstance(formula, Name) else None
+            found += self._previous_in((inner,) if inner is not None else children(formula))
+        return found
+
+    @property
+    def _on(self) -> str:
+        return f" on {self.occasion.day}" if self.occasion else ""
+
+    def _not_stated(self, term: str, place: Place) -> None:
+        text = (f"the term '{term}' is missing: it is optional in '{self.contract.payoff.name}', but with these terms "
+                f"it is read{self._on} ({place})")
+        self.owner.wrong.setdefault(term, Fault(self.contract.place, text))
+
+    def _not_begun(self, running: Running, place: Place) -> None:
+        """A running value that is read before its first date: the fault of the dates that the contract gives it."""
+        starts = [str(watch.start) for watch in self.dated.watches if watch.running.name == running.name]
+        starts += [str(update.occasion.day) for moment in self.dated.moments for update in moment.updates
+                   if update.running.name == running.name and update.first]
+        text = f"'{running.name}' is read{self._on} ({place}), but {f'begins on {starts[0]}' if starts else 'has no date'}"
+        stated = self.contract.terms.get(running.at.name) if isinstance(running.at, At) else None
+        self.owner.wrong.setdefault(running.name, Fault(stated.place if stated else running.place, text))
+
+
+def _formulas(event: Event) -> list[Formula]:
+    """Every formula written in an event."""
+    found = [event.condition] if event.condition is not None else []
+    for action in (*event.then, *event.otherwise):
+        if isinstance(action, Pay):
+            found.append(action.amount)
+        elif isinstance(action, Assign):
+            found += [right for _, right in action.values]
+    return found
+
+
+def _folded(formula: Formula, parts: list[float | None]) -> float | None:
+    """The value of an operation whose parts are all known, where it is one of the plain ones."""
+    if not parts or None in parts:
+        return None
+    match formula:
+        case Unary(symbol="not"):
+            return float(not parts[0])
+        case Unary():
+            return -parts[0]
+        case Binary(symbol=symbol) if symbol in ARITHMETIC and not (symbol == "/" and parts[1] == 0):
+            return float(ARITHMETIC[symbol](*parts))
+        case Call(function="min" | "max" as function):
+            return min(parts) if function == "min" else max(parts)
+        case Call(function=function) if function in SAME_OF_ONE:
+            return parts[0]
+    return None
