@@ -1,0 +1,148 @@
+"""The tape: a straight line of instructions in single-assignment form, and the plain arrays that kernels read.
+
+`Tape` is the one meaning of a contract. Instruction i defines value i; operands are numbers of earlier values. Outputs
+are named values: the price, each leg, each condition. `Program` is a tape made ready for the kernel.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from enum import Enum
+
+import numpy as np
+
+from mcx.faults import Place
+from mcx.tape.ops import OPS, Op
+
+
+class LeafKind(Enum):
+    """What a scalar input of the tape is; the numbers that go with it are in `Leaf`."""
+
+    LOG_SPOT = "log of the spot"  # asset
+    DRIFT = "drift of the log over a step"  # asset, start, end
+    FACTOR = "covariance factor of a step"  # asset, other (the asset whose normal it multiplies), start, end
+    VARIANCE = "variance of the log over a step"  # asset, start, end
+    FORWARD = "forward of an asset"  # asset, end
+    DISCOUNT = "funded discount factor"  # end: when the amount is paid
+    TERM = "a numeric term of the contract"  # name, asset (-1: one for all), index (-1: one for all dates)
+
+
+@dataclass(frozen=True, slots=True)
+class Leaf:
+    """The key of a scalar input. Times are years from the valuation date; unused fields keep their defaults."""
+
+    kind: LeafKind
+    asset: int = -1
+    other: int = -1
+    start: float = 0.0
+    end: float = 0.0
+    name: str = ""
+    index: int = -1
+
+    def __str__(self) -> str:
+        shown = [self.kind.name.lower()]
+        if self.name:
+            shown.append(self.name + (f"[{self.index}]" if self.index >= 0 else ""))
+        shown += [f"of {self.asset}"] if self.asset >= 0 else []
+        shown += [f"by {self.other}"] if self.other >= 0 else []
+        if self.kind not in (LeafKind.LOG_SPOT, LeafKind.TERM):
+            shown.append(f"at {self.end:.10g}" if self.start == 0.0 else f"from {self.start:.10g} to {self.end:.10g}")
+        return " ".join(shown)
+
+
+@dataclass(frozen=True, slots=True)
+class LevelKey:
+    """Which level an input of the contract's tape reads: an asset at a time (LOW, HIGH: over the step ending there)."""
+
+    asset: int
+    time: float
+    start: float = 0.0  # LOW and HIGH: where the watched stretch begins
+
+    def __str__(self) -> str:
+        since = f" since {self.start:.10g}" if self.start else ""
+        return f"of {self.asset} at {self.time:.10g}{since}"
+
+
+@dataclass(frozen=True, slots=True)
+class Instruction:
+    """One operation. `payload` is the number of a CONSTANT, the Leaf of a LEAF, the LevelKey of LEVEL, LOW and HIGH,
+    the dimension of NORMAL and UNIFORM; `place` is the line of the contract or payoff it came from, where known."""
+
+    op: Op
+    operands: tuple[int, ...] = ()
+    payload: float | Leaf | LevelKey | int | None = None
+    place: Place | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Output:
+    """A named result of the tape. `flag` outputs are 0 or 1 on each path.
+
+    `kind` is price, leg, part, condition, end, life or level; `subject` the leg's, part's, event's or asset's name;
+    `day` the date or span of dates that a condition or an end is about ('' for all dates). The name is made of them.
+    """
+
+    name: str
+    value: int
+    flag: bool = False
+    kind: str = ""
+    subject: str = ""
+    day: str = ""
+
+    @staticmethod
+    def of(kind: str, value: int, subject: str = "", day: str = "", flag: bool = False) -> Output:
+        name = f"{kind}: {subject}" if subject else kind
+        return Output(f"{name} @ {day}" if day else name, value, flag, kind, subject, day)
+
+    def at(self, value: int) -> Output:
+        """The same output where a pass has put its value."""
+        return replace(self, value=value)
+
+
+@dataclass(frozen=True, slots=True)
+class Tape:
+    """Instructions, outputs and how many normals and uniforms the draws must supply for each path."""
+
+    instructions: tuple[Instruction, ...]
+    outputs: tuple[Output, ...]
+    normals: int = 0
+    uniforms: int = 0
+
+    @property
+    def leaves(self) -> tuple[Leaf, ...]:
+        """The scalar inputs in order of first appearance: the order of every array of leaf values and adjoints."""
+        return tuple(dict.fromkeys(step.payload for step in self.instructions if step.op is Op.LEAF))
+
+    def __str__(self) -> str:
+        lines = []
+        for number, step in enumerate(self.instructions):
+            shown = OPS[step.op].form.format(*(f"v{k}" for k in step.operands))
+            if step.payload is not None:
+                shown += f" {step.payload}"
+            lines.append(f"v{number} = {shown}")
+        lines += [f"{output.name} -> v{output.value}" for output in self.outputs]
+        return "\n".join(lines)
+
+
+@dataclass(frozen=True, slots=True)
+class Program:
+    """A tape as the kernel reads it, for one set of leaf values.
+
+    Rows 0 .. draws-1 of the register file hold the draws (normals first, then uniforms); rows draws .. rows-1 are
+    work registers. An operand k >= 0 is row k; k < 0 is `scalars[-1 - k]`.
+
+    code      (instructions, 6) int32: op, destination row, operands a, b, c, d (unused: 0)
+    scalars   (scalars,) float64: values that are the same on every path
+    outputs   (outputs,) int32: operand number of each output
+    """
+
+    code: np.ndarray
+    scalars: np.ndarray
+    outputs: np.ndarray
+    normals: int
+    uniforms: int
+    rows: int
+
+    @property
+    def draws(self) -> int:
+        return self.normals + self.uniforms

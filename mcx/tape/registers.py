@@ -1,0 +1,119 @@
+"""From tape to program: what is the same on every path is computed once, everything else gets a register.
+
+A register is free again after the last use of its value; a result never goes where one of its own operands stands, so
+that the kernel's loops read and write different rows. Registers freed last are taken first: they are still in the
+cache.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from mcx.tape.builder import COMMUTATIVE
+from mcx.tape.ops import Op
+from mcx.tape.program import Program, Tape
+from mcx.tape.rules import evaluate
+
+
+@dataclass(slots=True)
+class _Scalars:
+    """The pool of values that are the same on every path; equal ones are held once."""
+
+    values: list[float] = field(default_factory=list)
+    numbers: dict[str, int] = field(default_factory=dict)
+
+    def operand(self, value: float) -> int:
+        key = float(value).hex()
+        if key not in self.numbers:
+            self.numbers[key] = len(self.values)
+            self.values.append(float(value))
+        return -1 - self.numbers[key]
+
+
+@dataclass(slots=True)
+class _Registers:
+    """Work registers from `first` upwards, given out and taken back."""
+
+    first: int
+    free: list[int] = field(default_factory=list)
+    used: int = 0
+
+    def take(self) -> int:
+        if self.free:
+            return self.free.pop()
+        self.used += 1
+        return self.first + self.used - 1
+
+
+def lower(tape: Tape, leaf_values: Sequence[float] | np.ndarray) -> Program:
+    """The program for one set of leaf values, shape (leaves,), in the order of `tape.leaves`."""
+    uniform = uniform_values(tape, leaf_values)
+    draws = tape.normals + tape.uniforms
+    registers = _Registers(draws)
+    scalars = _Scalars()
+    last_use = _last_uses(tape)
+    operand: dict[int, int] = {}  # value -> row, or -1 - scalar
+    code: list[tuple[int, ...]] = []
+
+    def read(value: int) -> int:
+        if value not in operand:
+            operand[value] = scalars.operand(uniform[value])
+        return operand[value]
+
+    for number, step in enumerate(tape.instructions):
+        if uniform[number] is not None:
+            continue
+        if step.op is Op.NORMAL:
+            operand[number] = step.payload
+        elif step.op is Op.UNIFORM:
+            operand[number] = tape.normals + step.payload
+        else:
+            sources = [read(k) for k in step.operands]
+            if step.op in COMMUTATIVE and sources[0] < 0:
+                sources.reverse()
+            operand[number] = registers.take()
+            code.append((int(step.op), operand[number], *sources, *(0,) * (4 - len(sources))))
+            if last_use[number] == number:  # nothing reads it: the register is free at once
+                registers.free.append(operand[number])
+            for value in set(step.operands):
+                if last_use[value] == number and operand[value] >= draws:
+                    registers.free.append(operand[value])
+    outputs = [read(output.value) for output in tape.outputs]
+    return Program(
+        code=np.array(code, dtype=np.int32).reshape(-1, 6),
+        scalars=np.array(scalars.values, dtype=np.float64),
+        outputs=np.array(outputs, dtype=np.int32),
+        normals=tape.normals,
+        uniforms=tape.uniforms,
+        rows=draws + registers.used,
+    )
+
+
+def uniform_values(tape: Tape, leaf_values: Sequence[float] | np.ndarray) -> list[float | None]:
+    """For each value of the tape the number that it is on every path, or None where it depends on the draws."""
+    leaves = dict(zip(tape.leaves, leaf_values, strict=True))
+    known: list[float | None] = []
+    for step in tape.instructions:
+        if step.op is Op.CONSTANT:
+            known.append(step.payload)
+        elif step.op is Op.LEAF:
+            known.append(float(leaves[step.payload]))
+        elif step.operands and all(known[k] is not None for k in step.operands):
+            known.append(float(evaluate(step.op, *(known[k] for k in step.operands))))
+        else:
+            known.append(None)
+    return known
+
+
+def _last_uses(tape: Tape) -> list[int]:
+    """For each value the last instruction that reads it (itself if none does); outputs are read at the very end."""
+    last = list(range(len(tape.instructions)))
+    for number, step in enumerate(tape.instructions):
+        for operand in step.operands:
+            last[operand] = number
+    for output in tape.outputs:
+        last[output.value] = len(tape.instructions)
+    return last

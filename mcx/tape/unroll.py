@@ -1,0 +1,289 @@
+"""A dated contract becomes a tape: the walk over its dates that every later stage takes its meaning from.
+
+On each date the running values are updated, then the events happen, both in file order, as `payoffs/README.md` says
+them. What is random stays a value of the tape; what the contract and its dates decide folds away while building.
+Running values need no care after the contract has ended, because nothing is paid or reported any more from there on.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass, field
+
+from mcx.checked.formula import Formula, Name, Previous
+from mcx.checked.payoff import Action, Assign, End, Event, Pay, Running
+from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Occasion, Update
+from mcx.faults import Fault, Place
+from mcx.tape.builder import Builder
+from mcx.tape.formulas import Formulas, Scene, Unreadable, Values
+from mcx.tape.ledger import Ledger
+from mcx.tape.ops import Op
+from mcx.tape.passes import drop_dead_code
+from mcx.tape.program import Instruction, Leaf, LeafKind, LevelKey, Output, Tape
+from mcx.tape.running import Observed, Watched
+from mcx.tape.steps import Grid, expand_levels
+from mcx.tape.watching import conflicts
+
+
+@dataclass(frozen=True, slots=True)
+class WatchNote:
+    """How a continuously watched running value enters: by which extreme of which asset, and by which law.
+
+    `side` is 'low', 'high' or '' where nothing reads it; `law` is 'exact' or 'unread'.
+    """
+
+    name: str
+    asset: str
+    side: str
+    law: str
+
+
+@dataclass(frozen=True, slots=True)
+class Unrolled:
+    """A contract as a tape. With faults the tapes are empty.
+
+    tape      reads normals and uniforms only: ready for `lower`
+    observed  the same contract still reading LEVEL, LOW and HIGH: its meaning on given levels
+    grid      the simulated times and assets
+    levels    for each 'level' output, by its name, the asset's number and the time: its mean is the forward
+    """
+
+    tape: Tape
+    observed: Tape
+    grid: Grid
+    levels: dict[str, tuple[int, float]]
+    watches: tuple[WatchNote, ...]
+    faults: tuple[Fault, ...] = ()
+
+
+def unroll(dated: DatedContract, *, nodes: Sequence[float]) -> Unrolled:
+    """The tape of a contract; `nodes` are the times of the market's curve points (`MarketMap.nodes`)."""
+    walk = _Walk(dated)
+    walk.run()
+    observed = drop_dead_code(walk.builder.tape(walk.ledger.outputs()))
+    faults = walk.faults or conflicts(observed)
+    if faults:
+        return Unrolled(Tape((), ()), Tape((), ()), Grid((0.0,), ()), {}, (), tuple(sorted(set(faults))))
+    observed, levels = _with_last_levels(observed, dated.contract.assets)
+    tape, grid = expand_levels(observed, nodes)
+    return Unrolled(tape, observed, grid, levels, walk.notes())
+
+
+def _with_last_levels(tape: Tape, assets: Sequence[str]) -> tuple[Tape, dict[str, tuple[int, float]]]:
+    """The tape with each simulated asset's level at its last observed time as an output, for the martingale test."""
+    last: dict[int, float] = {}
+    known: dict[LevelKey, int] = {}
+    for number, step in enumerate(tape.instructions):
+        if isinstance(step.payload, LevelKey):
+            last[step.payload.asset] = max(last.get(step.payload.asset, 0.0), step.payload.time)
+            if step.op is Op.LEVEL:
+                known[step.payload] = number
+    instructions, outputs = list(tape.instructions), list(tape.outputs)
+    levels: dict[str, tuple[int, float]] = {}
+    for asset, time in sorted(last.items()):
+        key = LevelKey(asset, time)
+        if time > 0.0 and key not in known:
+            known[key] = len(instructions)
+            instructions.append(Instruction(Op.LEVEL, (), key))
+        if time > 0.0:
+            output = Output.of("level", known[key], assets[asset])
+            outputs.append(output)
+            levels[output.name] = (asset, time)
+    return Tape(tuple(instructions), tuple(outputs)), levels
+
+
+@dataclass(slots=True)
+class _Branch:
+    """What one side of an event does: the settable values after it, and whether it ends the contract."""
+
+    values: dict[str, Values]
+    ends: bool = False
+    due: list[float] = field(default_factory=list)
+
+
+class _Walk:
+    """The state of a contract while its dates are walked: alive flag, running values, ledger, faults."""
+
+    def __init__(self, dated: DatedContract):
+        self.dated = dated
+        payoff = dated.contract.payoff
+        self.builder = Builder()
+        self.formulas = Formulas(dated.contract, self.builder)
+        self.ledger = Ledger.opened(self.builder, payoff)
+        self.alive = self.builder.constant(1.0)
+        self.faults: list[Fault] = []
+        self.observed: dict[str, Observed | Watched] = {}
+        self.settable: dict[str, Values] = {}
+        self.memory: dict[Place, dict[int, Values]] = {}  # by the place of the running value or event
+        self._previous: dict[Place, tuple[Previous, ...]] = {}
+        watches = {watch.running.name: watch for watch in dated.watches}
+        for running in payoff.running:
+            start = self._start(running.start)
+            if running.how == "set":
+                self.settable[running.name] = start
+            elif running.name in watches:
+                watch = watches[running.name]
+                if watch.start.time < 0.0:
+                    text = f"watched from {watch.start}, before the valuation date"
+                    self.faults.append(Fault(running.place, text))
+                self.observed[running.name] = Watched(watch, self.formulas, start)
+            else:
+                self.observed[running.name] = Observed(running, self.formulas, start, 1 if start else 0)
+
+    def run(self) -> None:
+        """Walk every moment, until the contract has ended on every path."""
+        for moment in self.dated.moments:
+            if self.builder.number(self.alive) == 0.0:
+                break
+            for update in moment.updates:
+                self._update(update)
+            for number, event in enumerate(moment.events):
+                try:
+                    self._event(event, moment.events[: number + 1])
+                except Unreadable as trouble:
+                    self.faults.append(trouble.fault)
+
+    def notes(self) -> tuple[WatchNote, ...]:
+        names = self.dated.contract.assets
+        return tuple(
+            WatchNote(name, names[state.side.asset], state.side.level_op.name.lower(), "exact")
+            if state.side
+            else WatchNote(name, "", "", "unread")
+            for name, state in self.observed.items()
+            if isinstance(state, Watched)
+        )
+
+    def _start(self, formula: Formula | None) -> Values | None:
+        """The value of `start:`, of terms and numbers only."""
+        if formula is None:
+            return None
+        try:
+            return self.formulas.read(formula, Scene(spot=_not_at_start, running=_not_at_start))
+        except Unreadable as trouble:
+            self.faults.append(trouble.fault)
+            return (self.builder.constant(0.0),)
+
+    def _update(self, update: Update) -> None:
+        running = update.running
+        state = self.observed[running.name]
+        try:
+            scene = self._scene(running, update.occasion, running.formula)
+            state.update(self.formulas.read(running.formula, scene))
+        except Unreadable as trouble:  # a fault only where somebody reads it
+            state.trouble = trouble
+
+    def _event(self, dated: DatedEvent, so_far: Sequence[DatedEvent]) -> None:
+        event, occasion = dated.event, dated.occasion
+        parts = _formulas_of((*event.then, *event.otherwise))
+        scene = self._scene(event, occasion, event.condition, *parts)
+        condition = self.formulas.one(event.condition, scene) if event.condition else self.builder.constant(1.0)
+        happens = self.builder.emit(Op.AND, self.alive, condition, place=event.place)
+        if event.name:
+            self.ledger.happened(event.name, occasion.day, happens)
+        does = self._branch(event.then, dated, happens, scene)
+        if event.otherwise:
+            opposite = self.builder.emit(Op.NOT, condition, place=event.place)
+            fails = self.builder.emit(Op.AND, self.alive, opposite, place=event.place)
+            does_not = self._branch(event.otherwise, dated, fails, scene)
+        else:
+            does_not = _Branch(self.settable)
+        self._merge(condition, does.values, does_not.values)
+        for branch, flag in ((does, condition), (does_not, self.builder.emit(Op.NOT, condition))):
+            if branch.ends:
+                self._end(flag, branch.due, so_far)
+
+    def _branch(self, actions: Iterable[Action], dated: DatedEvent, flag: int, scene: Scene) -> _Branch:
+        """Carry out one side of an event, which is taken where `flag`. `end` leaves the rest of it undone."""
+        branch = _Branch(dict(self.settable))
+        if self.builder.number(flag) == 0.0:
+            return branch
+        day = dated.occasion.day
+        scene = Scene(scene.spot, lambda name: self._running(name, day, branch.values), scene.occasion,
+                      scene.remembered)
+        for action in actions:
+            match action:
+                case Pay():
+                    due = dated.due[action]
+                    self._pay(action, self.formulas.one(action.amount, scene), due, flag)
+                    branch.due.append(due.time)
+                case Assign(values=pairs):
+                    branch.values.update({name: self.formulas.read(value, scene) for name, value in pairs})
+                case End():
+                    branch.ends = True
+                    break
+        return branch
+
+    def _pay(self, pay: Pay, amount: int, due: Day, flag: int) -> None:
+        emit = self.builder.emit
+        discount = self.builder.leaf(Leaf(LeafKind.DISCOUNT, end=due.time))
+        present = emit(Op.MUL, amount, discount, place=pay.place)
+        paid = emit(Op.SELECT, flag, present, self.builder.constant(0.0), place=pay.place)
+        self.ledger.pay(pay, paid, due)
+
+    def _merge(self, condition: int, yes: dict[str, Values], no: dict[str, Values]) -> None:
+        for name, value in yes.items():
+            if value != no[name]:
+                self.settable[name] = self.formulas.spread(Op.SELECT, (condition,), value, no[name])
+            else:
+                self.settable[name] = value
+
+    def _end(self, flag: int, due: Sequence[float], so_far: Sequence[DatedEvent]) -> None:
+        """End where `flag`. Its life runs to the branch's own payments, else to the day's, else to the day."""
+        event, day = so_far[-1].event, so_far[-1].occasion.day
+        of_the_day = [payment.time for dated in so_far for payment in dated.due.values()]
+        emit = self.builder.emit
+        ends = emit(Op.AND, self.alive, flag, place=event.place)
+        self.ledger.ended(day, ends, max(due or of_the_day or [day.time]))
+        self.alive = emit(Op.AND, self.alive, emit(Op.NOT, flag), place=event.place)
+
+    def _scene(self, owner: Running | Event, occasion: Occasion, *formulas: Formula | None) -> Scene:
+        """The names on a date, for the formulas of a running value or event. What each `previous` in them must
+        remember for the next date is taken now, before any action."""
+        day = occasion.day
+        if day.time < 0.0:
+            raise Unreadable(owner.place, f"observed on {day}, before the valuation date")
+        scene = Scene(
+            spot=lambda _: self._spot(day),
+            running=lambda name: self._running(name, day, self.settable),
+            occasion=occasion,
+            remembered=self.memory.get(owner.place),
+        )
+        if owner.place not in self._previous:
+            self._previous[owner.place] = tuple(self.formulas.previous_in(*formulas))
+        if self._previous[owner.place]:
+            self.memory[owner.place] = self._remember(self._previous[owner.place], scene)
+        return scene
+
+    def _remember(self, wanted: Iterable[Previous], scene: Scene) -> dict[int, Values]:
+        kept: dict[int, Values] = {}
+        for node in wanted:
+            try:
+                kept[id(node)] = self.formulas.read(node.operand, scene)
+            except Unreadable:
+                continue  # it stands in a branch that this contract does not take
+        return kept
+
+    def _spot(self, day: Day) -> Values:
+        return tuple(
+            self.builder.input(Op.LEVEL, LevelKey(asset, day.time)) for asset in range(len(self.dated.contract.assets))
+        )
+
+    def _running(self, name: Name, day: Day, values: dict[str, Values]) -> Values:
+        if name.name in values:
+            return values[name.name]
+        state = self.observed[name.name]
+        return state.read(name, day.time) if isinstance(state, Watched) else state.read(name)
+
+
+def _formulas_of(actions: Iterable[Action]) -> list[Formula]:
+    found: list[Formula] = []
+    for action in actions:
+        if isinstance(action, Pay):
+            found.append(action.amount)
+        elif isinstance(action, Assign):
+            found += [value for _, value in action.values]
+    return found
+
+
+def _not_at_start(name: Name) -> Values:
+    raise Unreadable(name.place, f"'{name.name}' is not known before the first date")
