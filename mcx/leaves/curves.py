@@ -1,0 +1,65 @@
+"""Curves of rates, spreads, yields and forwards, as logs that are linear between their points.
+
+A zero rate r to time t is the log -r t of a discount factor; funding spreads and yields are read by the same rule, and
+forwards are the log of the forward over the spot. Every curve starts at (0, 0), is linear in the log between points,
+and keeps its last slope beyond them: a flat forward rate.
+"""
+
+from __future__ import annotations
+
+import math
+from bisect import bisect_left
+from dataclasses import dataclass
+
+from mcx.checked.market import Curve
+
+
+@dataclass(frozen=True, slots=True)
+class LogCurve:
+    """`logs[k]` at `times[k]` (years, rising, from 0); `last_slope` per year beyond the last point."""
+
+    times: tuple[float, ...]
+    logs: tuple[float, ...]
+    last_slope: float
+
+    def log(self, time: float) -> float:
+        """The log at a time in years; linear between the points."""
+        if time >= self.times[-1]:
+            return self.logs[-1] + self.last_slope * (time - self.times[-1])
+        after = max(bisect_left(self.times, time), 1)
+        t0, t1 = self.times[after - 1], self.times[after]
+        weight = (time - t0) / (t1 - t0)
+        return (1.0 - weight) * self.logs[after - 1] + weight * self.logs[after]
+
+    def factor(self, time: float) -> float:
+        return math.exp(self.log(time))
+
+
+NOTHING = LogCurve((0.0,), (0.0,), 0.0)
+
+
+def log_curve(curve: Curve | None, spot: float = 1.0) -> LogCurve:
+    """The log of what a curve of the market says: discount factors for 'zero' and 'discount', and forwards over
+    `spot` for 'forward'. None is nothing at all: the log 0 at every time."""
+    if curve is None:
+        return NOTHING
+    if curve.flat and curve.form == "zero":
+        return LogCurve((0.0,), (0.0,), -curve.nodes[0].quoted.value)
+    times, logs = [0.0], [0.0]
+    for node in curve.nodes:
+        if node.time > 0.0:
+            times.append(node.time)
+            logs.append(_log(curve.form, node.time, node.quoted.value, spot))
+    slope = (logs[-1] - logs[-2]) / (times[-1] - times[-2]) if len(times) > 1 else 0.0
+    return LogCurve(tuple(times), tuple(logs), slope)
+
+
+def _log(form: str, time: float, value: float, spot: float) -> float:
+    match form:
+        case "zero":
+            return -value * time
+        case "discount":
+            return math.log(value)
+        case "forward":
+            return math.log(value / spot)
+    raise ValueError(f"no curve of discount factors: {form}")
