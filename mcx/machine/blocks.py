@@ -1,0 +1,140 @@
+"""Drives the kernel over blocks of paths, on several threads, and sums what comes out.
+
+Sums are taken over fixed groups of 64 paths by a tree of pairs; `sums.py` merges them in order of path number. So no
+digit depends on how many lanes a block has, which thread ran it, or where a batch ended.
+"""
+
+from __future__ import annotations
+
+from collections import deque
+from concurrent.futures import ThreadPoolExecutor
+
+import numpy as np
+
+from mcx.machine.draws import fill_draws
+from mcx.machine.forward import forward
+from mcx.machine.jit import jit
+from mcx.machine.prepare import KernelCode
+from mcx.machine.sizes import GROUP, lanes_for
+
+_TASKS = 16  # pieces of a batch for each thread: a core that is busy with something else takes fewer
+_CACHE_LINE = 8  # float64
+
+
+@jit
+def sweep(code, scalars, outputs, normals, uniforms, seed, stream, numbers, paths, registers, words,
+          means, squares, bad, values):  # fmt: skip
+    """Run whole blocks of paths and sum each output over each group of 64.
+
+    numbers    (blocks * lanes,) uint64: path numbers, of which the first `paths` count
+    registers  (rows + 1, more than lanes) float64 and words (4, lanes) int32: room to work
+    means      (groups, outputs), written: the mean over each group
+    squares    (groups, outputs), written: the sum of squares about that mean
+    bad        (groups,) int64, written: of the first value that is not finite, its path counted from the group's first,
+               times the outputs, plus its output; -1 if there is none
+    values     (paths, outputs), written; or (0, outputs)
+    """
+    lanes, width = words.shape[1], outputs.shape[0]
+    tree = registers[registers.shape[0] - 1]
+    for first in range(0, paths, lanes):
+        fill_draws(registers, words, numbers[first : first + lanes], normals, uniforms, seed, stream)
+        forward(registers, code, scalars, lanes)
+        here = min(lanes, paths - first)
+        for start in range(0, here, GROUP):
+            group, count = (first + start) // GROUP, min(GROUP, here - start)
+            finite = True
+            for k in range(width):
+                x = registers[outputs[k]][start : start + GROUP]
+                mean = _tree_sum(tree, x, 0.0, False, count) / count
+                means[group, k] = mean
+                squares[group, k] = _tree_sum(tree, x, mean, True, count)
+                finite &= squares[group, k] < np.inf
+            bad[group] = -1 if finite else _first_bad(registers, outputs, start, count)
+        if values.shape[0] > 0:
+            for k in range(width):
+                x = registers[outputs[k]]
+                for i in range(here):
+                    values[first + i, k] = x[i]
+
+
+@jit
+def _tree_sum(tree, x, centre, squared, count):
+    """The sum over the first `count` of 64 lanes of x - centre or its square, pair by pair, then pairs of pairs.
+
+    The tree fixes the order of the additions and still fills vector registers.
+    """
+    for i in range(32):
+        a, b = x[i] - centre, x[i + 32] - centre
+        a, b = a * a if squared else a, b * b if squared else b
+        tree[i] = (a if i < count else 0.0) + (b if i + 32 < count else 0.0)
+    for i in range(16):
+        tree[i] += tree[i + 16]
+    for i in range(8):
+        tree[i] += tree[i + 8]
+    for i in range(4):
+        tree[i] += tree[i + 4]
+    return (tree[0] + tree[2]) + (tree[1] + tree[3])
+
+
+@jit
+def _first_bad(registers, outputs, start, count):
+    for i in range(count):
+        for k in range(outputs.shape[0]):
+            if not abs(registers[outputs[k], start + i]) < np.inf:
+                return i * outputs.shape[0] + k
+    return -1  # all finite: only the sum of squares overflowed
+
+
+class Crew:
+    """Threads, each with room to work, that run one kernel code. A context manager; not for two callers at once."""
+
+    def __init__(self, code: KernelCode, seed: int, stream: int, threads: int, lanes: int | None = None):
+        self.code = code
+        self.lanes = lanes or lanes_for(code.rows)
+        self.threads = threads
+        self._draws = code.normals, code.uniforms, np.uint64(seed), np.uint64(stream)
+        self._rooms = deque(self._room() for _ in range(threads))
+        self._pool = ThreadPoolExecutor(threads) if threads > 1 else None
+
+    def __enter__(self) -> Crew:
+        return self
+
+    def __exit__(self, *error: object) -> None:
+        if self._pool:
+            self._pool.shutdown()
+
+    def run(self, numbers: np.ndarray, values: np.ndarray | None = None) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Means, squares and the first bad values of each group of the given path numbers, as `sweep` writes them.
+
+        numbers (paths,) uint64; values (paths, outputs) float64 is filled if given.
+        """
+        paths, outputs = len(numbers), len(self.code.outputs)
+        groups, blocks = -(-paths // GROUP), -(-paths // self.lanes)
+        padded = np.concatenate([numbers, np.resize(numbers, blocks * self.lanes - paths)])
+        means, squares = np.empty((groups, outputs)), np.empty((groups, outputs))
+        bad = np.empty(groups, dtype=np.int64)
+        piece = -(-blocks // (self.threads * _TASKS if self._pool else 1)) * self.lanes
+
+        def work(first: int) -> None:
+            last = min(first + piece, paths)
+            these = slice(first // GROUP, -(-last // GROUP))
+            written = np.empty((0, outputs)) if values is None else values[first:last]
+            room = self._rooms.pop()
+            sweep(self.code.code, self.code.scalars, self.code.outputs, *self._draws,
+                  padded[first : first + piece], last - first, *room, means[these], squares[these], bad[these],
+                  written)  # fmt: skip
+            self._rooms.append(room)
+
+        firsts = range(0, paths, piece)
+        for _ in self._pool.map(work, firsts) if self._pool else map(work, firsts):
+            pass
+        return means, squares, bad
+
+    def _room(self) -> tuple[np.ndarray, np.ndarray]:
+        """Registers and random words of one thread. Rows begin on cache lines, and are one line longer than the lanes:
+        with 512 lanes the same lane of all rows would else compete for the same few places of the cache."""
+        stride = self.lanes + _CACHE_LINE
+        raw = np.empty((self.code.rows + 1) * stride + _CACHE_LINE)
+        start = -raw.ctypes.data // 8 % _CACHE_LINE
+        registers = raw[start : start + (self.code.rows + 1) * stride].reshape(-1, stride)
+        return registers, np.empty((4, self.lanes), dtype=np.int32)

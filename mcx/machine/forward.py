@@ -1,0 +1,195 @@
+"""The kernel: interprets the code on one block of lanes, each instruction one loop that LLVM vectorises.
+
+Rows of one instruction are never the same (`prepare.py` sees to it), else the alias check would send the loop down
+its scalar branch. A form that is missing here would leave a row as it was: a test runs every one.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from mcx.machine.forms import Form
+from mcx.machine.jit import jit
+from mcx.machine.special import exp_row, log_row
+
+
+@jit
+def forward(registers, code, scalars, lanes):
+    """Run the code on one block: registers (rows, at least lanes) float64, code and scalars as in `KernelCode`."""
+    for line in range(code.shape[0]):
+        form = code[line, 0]
+        y = registers[code[line, 1]]
+        a, b, c, d = code[line, 2], code[line, 3], code[line, 4], code[line, 5]
+        if form < Form.LT_RR:
+            _arithmetic(form, y, registers, scalars, a, b, lanes)
+        elif form < Form.STEP_RSR:
+            _logic(form, y, registers, scalars, a, b, c, lanes)
+        else:
+            _model(form, y, registers, scalars, a, b, c, d, lanes)
+
+
+@jit
+def _arithmetic(form, y, registers, scalars, a, b, lanes):
+    if form == Form.FILL_S:
+        s = scalars[a]
+        for i in range(lanes):
+            y[i] = s
+    elif form == Form.ADD_RR:
+        p, q = registers[a], registers[b]
+        for i in range(lanes):
+            y[i] = p[i] + q[i]
+    elif form == Form.ADD_RS:
+        p, s = registers[a], scalars[b]
+        for i in range(lanes):
+            y[i] = p[i] + s
+    elif form == Form.SUB_RR:
+        p, q = registers[a], registers[b]
+        for i in range(lanes):
+            y[i] = p[i] - q[i]
+    elif form == Form.SUB_SR:
+        s, q = scalars[a], registers[b]
+        for i in range(lanes):
+            y[i] = s - q[i]
+    elif form == Form.MUL_RR:
+        p, q = registers[a], registers[b]
+        for i in range(lanes):
+            y[i] = p[i] * q[i]
+    elif form == Form.MUL_RS:
+        p, s = registers[a], scalars[b]
+        for i in range(lanes):
+            y[i] = p[i] * s
+    elif form == Form.DIV_RR:
+        p, q = registers[a], registers[b]
+        for i in range(lanes):
+            y[i] = p[i] / q[i]
+    elif form == Form.DIV_RS:
+        p, s = registers[a], scalars[b]
+        for i in range(lanes):
+            y[i] = p[i] / s
+    elif form == Form.DIV_SR:
+        s, q = scalars[a], registers[b]
+        for i in range(lanes):
+            y[i] = s / q[i]
+    elif form == Form.POW_RR:
+        p, q = registers[a], registers[b]
+        for i in range(lanes):
+            y[i] = np.power(p[i], q[i])
+    elif form == Form.MIN_RR:  # NaN of either operand gets through, as in np.minimum
+        p, q = registers[a], registers[b]
+        for i in range(lanes):
+            y[i] = p[i] if p[i] < q[i] or p[i] != p[i] else q[i]
+    elif form == Form.MIN_RS:
+        p, s = registers[a], scalars[b]
+        for i in range(lanes):
+            y[i] = p[i] if p[i] < s or p[i] != p[i] else s
+    elif form == Form.MAX_RR:
+        p, q = registers[a], registers[b]
+        for i in range(lanes):
+            y[i] = p[i] if p[i] > q[i] or p[i] != p[i] else q[i]
+    elif form == Form.MAX_RS:
+        p, s = registers[a], scalars[b]
+        for i in range(lanes):
+            y[i] = p[i] if p[i] > s or p[i] != p[i] else s
+    elif form == Form.ABS_R:
+        p = registers[a]
+        for i in range(lanes):
+            y[i] = abs(p[i])
+    elif form == Form.EXP_R:
+        exp_row(y, registers[a], lanes)
+    elif form == Form.LOG_R:
+        log_row(y, registers[a], lanes)
+    elif form == Form.SQRT_R:
+        p = registers[a]
+        for i in range(lanes):
+            y[i] = np.sqrt(p[i])
+
+
+@jit
+def _logic(form, y, registers, scalars, a, b, c, lanes):
+    if form == Form.LT_RR:
+        p, q = registers[a], registers[b]
+        for i in range(lanes):
+            y[i] = 1.0 if p[i] < q[i] else 0.0
+    elif form == Form.LT_RS:
+        p, s = registers[a], scalars[b]
+        for i in range(lanes):
+            y[i] = 1.0 if p[i] < s else 0.0
+    elif form == Form.LT_SR:
+        s, q = scalars[a], registers[b]
+        for i in range(lanes):
+            y[i] = 1.0 if s < q[i] else 0.0
+    elif form == Form.LE_RR:
+        p, q = registers[a], registers[b]
+        for i in range(lanes):
+            y[i] = 1.0 if p[i] <= q[i] else 0.0
+    elif form == Form.LE_RS:
+        p, s = registers[a], scalars[b]
+        for i in range(lanes):
+            y[i] = 1.0 if p[i] <= s else 0.0
+    elif form == Form.LE_SR:
+        s, q = scalars[a], registers[b]
+        for i in range(lanes):
+            y[i] = 1.0 if s <= q[i] else 0.0
+    elif form == Form.EQ_RR:
+        p, q = registers[a], registers[b]
+        for i in range(lanes):
+            y[i] = 1.0 if p[i] == q[i] else 0.0
+    elif form == Form.EQ_RS:
+        p, s = registers[a], scalars[b]
+        for i in range(lanes):
+            y[i] = 1.0 if p[i] == s else 0.0
+    elif form == Form.NE_RR:
+        p, q = registers[a], registers[b]
+        for i in range(lanes):
+            y[i] = 1.0 if p[i] != q[i] else 0.0
+    elif form == Form.NE_RS:
+        p, s = registers[a], scalars[b]
+        for i in range(lanes):
+            y[i] = 1.0 if p[i] != s else 0.0
+    elif form == Form.AND_RR:
+        p, q = registers[a], registers[b]
+        for i in range(lanes):
+            y[i] = 1.0 if p[i] != 0.0 and q[i] != 0.0 else 0.0
+    elif form == Form.OR_RR:
+        p, q = registers[a], registers[b]
+        for i in range(lanes):
+            y[i] = 1.0 if p[i] != 0.0 or q[i] != 0.0 else 0.0
+    elif form == Form.SELECT_RRR:
+        p, q, r = registers[a], registers[b], registers[c]
+        for i in range(lanes):
+            taken, other = q[i], r[i]  # both loaded: a load on one branch only would stop vectorisation
+            y[i] = taken if p[i] != 0.0 else other
+    elif form == Form.SELECT_RRS:
+        p, q, s = registers[a], registers[b], scalars[c]
+        for i in range(lanes):
+            y[i] = q[i] if p[i] != 0.0 else s
+    elif form == Form.SELECT_RSR:
+        p, s, r = registers[a], scalars[b], registers[c]
+        for i in range(lanes):
+            y[i] = s if p[i] != 0.0 else r[i]
+
+
+@jit
+def _model(form, y, registers, scalars, a, b, c, d, lanes):
+    if form == Form.STEP_RSR:
+        x, s, z = registers[a], scalars[b], registers[c]
+        for i in range(lanes):
+            y[i] = x[i] + s * z[i]
+    elif form == Form.STEP_SSR:
+        start, s, z = scalars[a], scalars[b], registers[c]
+        for i in range(lanes):
+            y[i] = start + s * z[i]
+    elif form == Form.DRIFT_STEP_RSSR:
+        x, m, s, z = registers[a], scalars[b], scalars[c], registers[d]
+        for i in range(lanes):
+            y[i] = x[i] + m + s * z[i]
+    elif form == Form.BRIDGE_LOW_RRSR:  # inversion of the law of a Brownian bridge's extreme; see tape/rules.py
+        x0, x1, variance, log = registers[a], registers[b], scalars[c], registers[d]
+        for i in range(lanes):
+            move = x1[i] - x0[i]
+            y[i] = 0.5 * (x0[i] + x1[i] - np.sqrt(move * move - 2.0 * variance * log[i]))
+    elif form == Form.BRIDGE_HIGH_RRSR:
+        x0, x1, variance, log = registers[a], registers[b], scalars[c], registers[d]
+        for i in range(lanes):
+            move = x1[i] - x0[i]
+            y[i] = 0.5 * (x0[i] + x1[i] + np.sqrt(move * move - 2.0 * variance * log[i]))

@@ -1,0 +1,75 @@
+"""The one decorator of every kernel: flags, error model and the folder that holds the compiled code.
+
+numba's own cache watches a function's own file only: after renumbering an operation elsewhere it would silently run
+old code. So the folder is named by a hash of all sources that a kernel can see, of numba and of the processor.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import os
+import tempfile
+from functools import cache
+from pathlib import Path
+
+import llvmlite.binding
+import numba
+
+COMPILED = not numba.config.DISABLE_JIT
+
+# Contraction (a fused multiply-add) and no signed zeros are safe. Left out on purpose: 'nnan' and 'ninf', since NaN
+# and infinity must get through; 'reassoc', since it would change the order of sums.
+_FLAGS = {"contract", "nsz"}
+
+
+def jit(function):
+    """Compile on first use, without the GIL, with numpy's division (a check for zero would stop vectorisation)."""
+    if not COMPILED:
+        return function
+    # The folder is read when the cache is made, inside this call; other users of numba must not see ours.
+    before, numba.config.CACHE_DIR = numba.config.CACHE_DIR, str(cache_folder())
+    try:
+        return numba.njit(error_model="numpy", fastmath=_FLAGS, nogil=True, cache=True)(function)
+    finally:
+        numba.config.CACHE_DIR = before
+
+
+def is_cold(entry: str) -> bool:
+    """Whether the kernel named `entry` has still to be compiled for this machine."""
+    return COMPILED and not any(cache_folder().rglob(f"*.{entry}-*.nbi"))
+
+
+@cache
+def cache_folder() -> Path:
+    """The folder of this version's kernels: under NUMBA_CACHE_DIR, else the user's cache directory, else a
+    temporary folder of the user's own."""
+    name = f"kernels-{_fingerprint()}"
+    base = numba.config.CACHE_DIR or os.environ.get("XDG_CACHE_HOME") or os.path.join(os.path.expanduser("~"), ".cache")
+    for parent in (Path(base, "mcx"), Path(tempfile.gettempdir(), f"mcx-{_user()}")):
+        if _is_ours(parent / name):
+            return parent / name
+    return Path(tempfile.mkdtemp(prefix="mcx-"))
+
+
+def _is_ours(folder: Path) -> bool:
+    """Whether the folder can be made, is writable, and belongs to the user: cached code is executed when read."""
+    try:
+        folder.mkdir(mode=0o700, parents=True, exist_ok=True)
+        with tempfile.TemporaryFile(dir=folder):
+            return not hasattr(os, "getuid") or folder.stat().st_uid == os.getuid()
+    except OSError:
+        return False
+
+
+def _user() -> str:
+    return str(os.getuid()) if hasattr(os, "getuid") else "user"
+
+
+def _fingerprint() -> str:
+    here = Path(__file__).parent
+    digest = hashlib.sha256()
+    for source in (*sorted(here.glob("*.py")), here.parent / "tape" / "ops.py"):
+        digest.update(source.read_bytes())
+    features = llvmlite.binding.get_host_cpu_features().flatten()
+    digest.update(f"{numba.__version__} {llvmlite.__version__} {llvmlite.binding.get_host_cpu_name()} {features}".encode())
+    return digest.hexdigest()[:16]

@@ -1,0 +1,57 @@
+"""How large the pieces of a run are, and what a path costs.
+
+Costs come from a fixed table, since nothing that a result depends on may depend on the clock: nanoseconds for one
+lane, as benchmarks/kernel.py measured them on one core with 256-bit vectors at about 2.5 GHz. Only ratios matter.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from mcx.machine.forms import Form
+from mcx.machine.prepare import KernelCode, prepare
+from mcx.tape.program import Program
+
+GROUP = 64  # paths that are summed together, whatever the block
+
+_NORMAL, _UNIFORM, _OUTPUT = 2.7, 0.9, 0.8
+_USUAL = 0.17
+_DEAR = {
+    Form.DIV_RR: 0.42,
+    Form.DIV_RS: 0.42,
+    Form.DIV_SR: 0.42,
+    Form.SQRT_R: 0.75,
+    Form.EXP_R: 1.1,
+    Form.LOG_R: 1.6,
+    Form.POW_RR: 15.0,
+    Form.BRIDGE_LOW_RRSR: 0.8,
+    Form.BRIDGE_HIGH_RRSR: 0.8,
+}
+_BY_FORM = np.array([_DEAR.get(form, _USUAL) for form in Form])
+
+
+_BATCH = 1 << 17  # paths between two reports of progress,
+_BATCH_TIME = 2.5e8  # unless they take longer than this on one core: an interruption must be prompt
+_CACHE = 1 << 18  # bytes of a register file: half the second-level cache of a small core
+
+
+def nanoseconds(code: KernelCode) -> float:
+    """The cost of one path on one core."""
+    arithmetic = float(_BY_FORM[code.code[:, 0] - min(Form)].sum())
+    return _NORMAL * code.normals + _UNIFORM * code.uniforms + arithmetic + _OUTPUT * len(code.outputs)
+
+
+def cost(program: Program) -> float:
+    """The cost of one path of a program, to compare programs with."""
+    return nanoseconds(prepare(program))
+
+
+def batch_for(code: KernelCode, lanes: int) -> int:
+    """Paths in a batch: a whole number of blocks."""
+    paths = min(_BATCH, _BATCH_TIME / max(nanoseconds(code), 1.0))
+    return max(int(paths) // lanes, 1) * lanes
+
+
+def lanes_for(rows: int) -> int:
+    """How many paths a block has: its register file stays in the second-level cache; a multiple of 64 up to 1024."""
+    return min(max(_CACHE // (8 * rows) // GROUP * GROUP, GROUP), 1024)
