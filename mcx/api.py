@@ -1,0 +1,278 @@
+"""One function for each verb: files and wishes in, a frozen result out.
+
+The only module that knows every layer. `InputError` is raised once, with every fault of all documents; `RequestError`
+for options without meaning; `Refusal` for what cannot be computed rightly. What is heavy is imported inside the verbs,
+after the documents are known to be sound.
+"""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable, Iterable, Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from mcx.checked.load import Request, checked_request, request
+from mcx.dates.dated_contract import DatedContract
+from mcx.dates.dating import date_contract
+from mcx.faults import Fault, InputError, Place, Refusal, RequestError, did_you_mean
+from mcx.text.located import Document
+
+if TYPE_CHECKING:
+    from mcx.estimators.plan import Precision
+    from mcx.estimators.price import Ready
+    from mcx.report.results import Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay
+
+File = str | Path
+Progress = Callable[[int, int, float], None]  # paths done, paths planned, standard error so far (unit of the price)
+REDUCTIONS = ("none",)
+LARGEST_SEED = (1 << 64) - 1
+CONTRACT_BEGINS = "a document that begins 'contract: TITLE'"
+MARKET_BEGINS = "a document that begins 'market: DATE'"
+
+
+def price(
+    *files: File,
+    paths: int | None = None,
+    within: str | float | None = None,
+    seconds: float | None = None,
+    seed: int | None = None,
+    threads: int | None = None,
+    reduction: str = "none",
+    record: File | None = None,
+    progress: Progress | None = None,
+    notice: Callable[[str], None] | None = None,
+) -> PriceResult | PriceTable:
+    """The value of every contract in the files on the market in them: one result, or a table of several.
+
+    At most one of `paths`, `within` (a 95 % half-width: '2bp' or '0.02%' of the notional, '0.01' money per unit) and
+    `seconds` decides the number of paths; without any it is 2^20. `seed` None is 1. `threads` None takes all; it
+    changes no digit. `record` names a file to write a valuation record to. `notice` is called with a sentence when
+    kernels must be compiled. Raises InputError, RequestError, Refusal.
+    """
+    from mcx.estimators.plan import DEFAULT_SEED, check_fits, precision
+
+    asked = precision(paths, within, seconds)
+    seed = DEFAULT_SEED if seed is None else _seed(seed)
+    threads = _threads(threads)
+    _reduction(reduction)
+    if record is not None:
+        from mcx.report.record import check_free
+
+        check_free(record)
+    made, dated = _dated(files, with_market=True)
+    for each in made.contracts:
+        check_fits(asked, notional=each.notional is not None, title=each.title)
+    table = _price(made, dated, [asked] * len(dated), [seed] * len(dated), threads, progress, notice)
+    if record is not None and not table.interrupted:
+        from mcx.report.record import make_record, write_record
+
+        write_record(record, make_record(_sources(made), [each.to_dict() for each in table.prices]))
+    return table.prices[0] if len(made.contracts) == 1 else table
+
+
+def readback(*files: File, path: File | None = None) -> Readback | ReadbackTable:
+    """What every contract in the files says, in sentences and dates; with a market also what that says on the dates.
+
+    `path` names a file of levels (YAML by asset and date, or CSV) that is run through the one contract in the files.
+    Raises InputError, RequestError.
+    """
+    from mcx.report.readback import readback as read_back
+    from mcx.report.results import ReadbackTable
+
+    made, dated = _dated(files, with_market=False)
+    if path is not None and len(dated) > 1:
+        raise RequestError(f"levels can be run through one contract at a time; the files hold {len(dated)}")
+    given = None if path is None else _on_levels(dated[0], path)
+    found = tuple(read_back(each, made.market, given) for each in dated)
+    return found[0] if len(found) == 1 else ReadbackTable(found)
+
+
+def payoffs() -> Library:
+    """Every definition of the library."""
+    from mcx.checked.library import shipped_names
+    from mcx.report.results import Library
+
+    return Library(tuple(definition(name) for name in shipped_names()))
+
+
+def definition(name: str) -> Definition:
+    """One definition of the library; raises RequestError for an unknown name."""
+    from mcx.checked.library import shipped_text
+    from mcx.report.results import Definition
+
+    payoff = _shipped(name)
+    fewest, most = payoff.assets
+    number = f"{fewest}" if most == fewest else f"{fewest} or more" if most is None else f"{fewest} to {most}"
+    return Definition(name, payoff.about, number, shipped_text(name))
+
+
+def blank(name: str, assets: Sequence[str]) -> str:
+    """Contract and market to fill in for a definition, as YAML text; raises RequestError for what does not fit."""
+    from mcx.checked.values import ASSET
+    from mcx.report.blank import blank as fill_in
+
+    payoff = _shipped(name)
+    wrong = [asset for asset in assets if not ASSET.fullmatch(asset)]
+    if wrong or not assets:
+        raise RequestError(f"the assets are names of letters, digits and . _ - &, parted by commas; not "
+                           f"'{wrong[0] if wrong else ''}'")
+    if len(set(assets)) < len(assets):
+        raise RequestError("an asset is named twice")
+    fewest, most = payoff.assets
+    if len(assets) < fewest or (most is not None and len(assets) > most):
+        wanted = f"{fewest}" if most == fewest else f"{fewest} or more"
+        raise RequestError(f"'{name}' takes {wanted} asset{'' if wanted == '1' else 's'}, not {len(assets)}")
+    return fill_in(payoff, assets)
+
+
+def replay(
+    file: File,
+    *,
+    threads: int | None = None,
+    progress: Progress | None = None,
+    notice: Callable[[str], None] | None = None,
+) -> Replay:
+    """Whether a valuation record reproduces from the texts in it; raises RequestError for what is no whole record."""
+    from mcx.estimators.plan import precision
+    from mcx.report.record import compare, documents_of, environment, read_record
+
+    threads = _threads(threads)
+    stored = read_record(file)
+    made, faults = checked_request(documents_of(stored))
+    dated = _all_dated(made, faults)
+    runs = stored["request"]
+    asked = [precision(each["paths"], None, None) for each in runs]
+    table = _price(made, dated, asked, [each["seed"] for each in runs], threads, progress, notice)
+    if table.interrupted:
+        raise KeyboardInterrupt
+    return compare(stored, [each.to_dict() for each in table.prices], environment())
+
+
+def _dated(files: Sequence[File], *, with_market: bool) -> tuple[Request, list[DatedContract]]:
+    """The documents of the files and their contracts with every date, all sound."""
+    if not files:
+        raise RequestError("no files are given")
+    made, faults = request(files)
+    kinds = {document.kind for document in made.documents}
+    names = ", ".join(map(str, files))
+    missing = [("contract", CONTRACT_BEGINS), ("market", MARKET_BEGINS)][: 1 + with_market]
+    for kind, begins in missing:
+        if kind not in kinds and not any(fault.place.line == 1 == fault.place.column for fault in faults):
+            faults.append(Fault(Place(str(files[0]), 1, 1), f"no {kind} in {names}; expected {begins}"))
+    return made, _all_dated(made, faults)
+
+
+def _all_dated(made: Request, faults: Iterable[Fault]) -> list[DatedContract]:
+    """Every contract of a request with its dates; raises InputError with all faults."""
+    faults, dated = list(faults), []
+    for contract in made.contracts:
+        found, wrong = date_contract(contract, made.market.valuation if made.market else None)
+        faults += wrong
+        if found is not None:
+            dated.append(found)
+    if faults:
+        raise InputError(faults)
+    return dated
+
+
+def _price(
+    made: Request,
+    dated: Sequence[DatedContract],
+    asked: Sequence[Precision],
+    seeds: Sequence[int],
+    threads: int | None,
+    progress: Progress | None,
+    notice: Callable[[str], None] | None,
+) -> PriceTable:
+    """Every contract valued; after an interruption those so far."""
+    from mcx.estimators.price import value
+    from mcx.machine.run import NonFinitePath
+    from mcx.report.results import PriceTable
+    from mcx.report.summary import price_result
+
+    results = []
+    for ready, wish, seed in zip(_ready(made, dated), asked, seeds, strict=True):
+        try:
+            valuation = value(ready, wish, seed=seed, threads=threads, progress=progress, notice=notice)
+        except NonFinitePath as trouble:
+            output = ready.unrolled.tape.outputs[trouble.output if trouble.stream == 0 else 0].name
+            raise Refusal(f"'{ready.dated.contract.title}': '{output}' is not a finite number on path {trouble.path} "
+                          f"(seed {seed}, stream {trouble.stream}); a formula divides by 0, overflows or leaves the "
+                          f"domain of log, sqrt or a power") from None
+        results.append(price_result(ready, made.market, valuation))
+        if valuation.interrupted:
+            break
+    return PriceTable(tuple(results))
+
+
+def _ready(made: Request, dated: Sequence[DatedContract]) -> list[Ready]:
+    """Every contract as a program on the market; raises InputError with all that the tape refuses."""
+    from mcx.estimators.price import prepare
+
+    found = [prepare(each, made.market) for each in dated]
+    faults = [fault for _, wrong in found for fault in wrong]
+    if faults:
+        raise InputError(faults)
+    return [ready for ready, _ in found]
+
+
+def _on_levels(dated: DatedContract, path: File):
+    """The payments of a contract on the levels of a file."""
+    from mcx.report.given_path import run_levels
+    from mcx.report.levels import read_levels
+    from mcx.tape.unroll import unroll
+
+    file = str(path)
+    try:
+        data = Path(file).read_bytes()
+    except (OSError, ValueError) as error:
+        raise RequestError(f"{file}: the levels cannot be read: {getattr(error, 'strerror', None) or error}") from None
+    levels, faults = read_levels(data, file, dated)
+    unrolled = unroll(dated, nodes=())
+    faults += unrolled.faults
+    if not faults:
+        found, faults = run_levels(dated, unrolled.observed, levels, file)
+    if faults:
+        raise InputError(faults)
+    return found
+
+
+def _sources(made: Request) -> tuple[Document, ...]:
+    """Every document of a request, the definitions of the library that it used included."""
+    return tuple(dict.fromkeys((*made.documents, *made.payoffs)))
+
+
+def _shipped(name: str):
+    """A definition of the library, checked."""
+    from mcx.checked.library import shipped, shipped_names
+    from mcx.checked.read_payoff import read_payoff
+
+    if name not in shipped_names():
+        near = did_you_mean(name, shipped_names()) or "; 'mcx payoffs' lists those there are"
+        raise RequestError(f"there is no payoff '{name}' in the library{near}")
+    payoff, faults = read_payoff(shipped(name))
+    if faults:
+        raise InputError(faults)
+    return payoff
+
+
+def _seed(seed: object) -> int:
+    if isinstance(seed, bool) or not hasattr(seed, "__index__") or not 0 <= seed <= LARGEST_SEED:
+        raise RequestError(f"'seed' is a whole number from 0 to {LARGEST_SEED}, not {seed!r}")
+    return int(seed)
+
+
+def _threads(threads: object) -> int | None:
+    if threads is None:
+        return None
+    most = len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
+    if isinstance(threads, bool) or not hasattr(threads, "__index__") or not 1 <= threads <= most:
+        raise RequestError(f"'threads' is from 1 to {most}, the processors at hand, not {threads!r}")
+    return int(threads)
+
+
+def _reduction(reduction: str) -> None:
+    if reduction not in REDUCTIONS:
+        raise RequestError(f"the variance reduction '{reduction}' is not known to this version; it knows 'none', others "
+                           f"come with a later version")

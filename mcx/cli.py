@@ -1,0 +1,200 @@
+"""The command line: options to `mcx.api`, results to tables or JSON, trouble to exit codes.
+
+0 done; 1 the answer is no; 2 the input or the request is wrong; 130 interrupted.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import sys
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from typing import TYPE_CHECKING
+
+import click
+
+if TYPE_CHECKING:
+    from mcx.report.results import Result
+    from mcx.report.terminal import Page
+
+NO, WRONG, INTERRUPTED = 1, 2, 130
+
+FILES = click.argument("files", nargs=-1, required=True, metavar="FILES…")
+AS_JSON = click.option("--json", "as_json", is_flag=True, help="One JSON object, full precision.")
+THREADS = click.option("--threads", type=int, help="Processors to use; changes no digit.  [all]")
+
+
+def sampling(command: Callable) -> Callable:
+    """The options that mean the same on every command that draws paths."""
+    for option in (
+        click.option("--reduction", default="none", help="Variance reduction.  [none]"),
+        THREADS,
+        click.option("--seed", type=int, help="Seed of the random numbers.  [1]"),
+        click.option("--seconds", type=float, help="As many paths as this time allows, by a pilot run."),
+        click.option("--within", help="95 % half-width to reach, as 2bp; money per unit, as 0.01, for 'units'."),
+        click.option("--paths", type=int, help="Number of paths.  [1048576]"),
+    ):
+        command = option(command)
+    return command
+
+
+@click.group(context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
+@click.version_option(package_name="mcx", message="%(version)s")
+def cli() -> None:
+    """Independent values, with their errors, for structured notes and exotic options declared in YAML.
+
+    FILES hold contracts, one market, and definitions of your own; '-' is standard input.
+    """
+
+
+@cli.command()
+@FILES
+@sampling
+@AS_JSON
+@click.option("--record", type=click.Path(), help="Write a valuation record to this new file.")
+def price(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
+    """What is it worth? Value, error, legs, probabilities and checks."""
+    from mcx import api
+
+    with _progress() as (progress, notice):
+        result = api.price(*files, progress=progress, notice=notice, **wishes)
+    _show(result, as_json, _price_view)
+    if result.interrupted:
+        if wishes["record"]:
+            _complain("interrupted: no record was written")
+        sys.exit(INTERRUPTED)
+
+
+@cli.command()
+@FILES
+@click.option("--path", type=click.Path(), help="Levels (YAML or CSV) to run through the contract.")
+@AS_JSON
+def readback(files: tuple[str, ...], path: str | None, as_json: bool) -> None:
+    """What does the contract say? Plain sentences, and every date."""
+    from mcx import api
+
+    _show(api.readback(*files, path=path), as_json, _readback_view)
+
+
+@cli.command()
+@click.argument("name", required=False)
+@click.option("--blank", is_flag=True, help="Contract and market to fill in.")
+@click.option("--assets", metavar="A,B", help="The assets to write into them.")
+@AS_JSON
+def payoffs(name: str | None, blank: bool, assets: str | None, as_json: bool) -> None:
+    """Which definitions are there? NAME prints one in full."""
+    from mcx import api
+
+    if blank != (assets is not None) or (blank and name is None):
+        raise click.UsageError("a blank needs all three: 'mcx payoffs NAME --blank --assets a,b'")
+    if blank:
+        text = api.blank(name, [asset.strip() for asset in assets.split(",")])
+        click.echo(json.dumps({"blank": text}, indent=2, ensure_ascii=False) if as_json else text, nl=as_json)
+    elif name:
+        found = api.definition(name)
+        click.echo(_as_json(found) if as_json else found.text, nl=as_json)
+    else:
+        _show(api.payoffs(), as_json, _library_view)
+
+
+@cli.command()
+@click.argument("file", type=click.Path())
+@THREADS
+@AS_JSON
+def replay(file: str, threads: int | None, as_json: bool) -> None:
+    """Does a stored valuation reproduce?"""
+    from mcx import api
+
+    with _progress() as (progress, notice):
+        result = api.replay(file, threads=threads, progress=progress, notice=notice)
+    _show(result, as_json, _replay_view)
+    if not result.identical:
+        sys.exit(NO)
+
+
+def main(arguments: list[str] | None = None) -> None:
+    """The door: runs a command and ends the process with its exit code."""
+    from mcx.faults import InputError, Refusal, RequestError
+
+    for stream in (sys.stdout, sys.stderr):
+        if hasattr(stream, "reconfigure"):
+            stream.reconfigure(errors="replace")  # a terminal without '±' is no reason to fail
+    try:
+        cli.main(arguments, prog_name="mcx", standalone_mode=False)
+        sys.stdout.flush()
+    except (InputError, RequestError, Refusal) as trouble:
+        _complain(str(trouble))
+        sys.exit(WRONG)
+    except click.ClickException as trouble:
+        context = getattr(trouble, "ctx", None)
+        hint = f" (see '{context.command_path} --help')" if context else ""
+        _complain(f"{trouble.format_message().rstrip('.')}{hint}")
+        sys.exit(WRONG)
+    except (KeyboardInterrupt, click.Abort):
+        _complain("interrupted before there was an estimate")
+        sys.exit(INTERRUPTED)
+    except BrokenPipeError:  # the reader has read what it wanted
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        sys.exit(0)
+
+
+def _complain(text: str) -> None:
+    click.echo(text, err=True)
+
+
+def _as_json(result: Result) -> str:
+    return json.dumps(result.to_dict(), indent=2, ensure_ascii=False, allow_nan=False)
+
+
+def _show(result: Result, as_json: bool, view: Callable[[Result, Page], None]) -> None:
+    """A result as JSON, or by its view on a page."""
+    if as_json:
+        click.echo(_as_json(result))
+        return
+    from mcx.report.terminal import Page
+
+    page = Page()
+    view(result, page)
+    page.write()
+
+
+def _price_view(result: Result, page: Page) -> None:
+    from mcx.report.price_view import show_price, show_prices
+    from mcx.report.results import PriceTable
+
+    (show_prices if isinstance(result, PriceTable) else show_price)(result, page)
+
+
+def _readback_view(result: Result, page: Page) -> None:
+    from mcx.report.readback_view import show_readback
+    from mcx.report.results import ReadbackTable
+
+    for number, each in enumerate(result.readbacks if isinstance(result, ReadbackTable) else (result,)):
+        if number:
+            page.line()
+        show_readback(each, page)
+
+
+def _library_view(result: Result, page: Page) -> None:
+    from mcx.report.readback_view import show_library
+
+    show_library(result, page)
+
+
+def _replay_view(result: Result, page: Page) -> None:
+    from mcx.report.readback_view import show_replay
+
+    show_replay(result, page)
+
+
+@contextmanager
+def _progress() -> Iterator[tuple[Callable | None, Callable | None]]:
+    """Callbacks that show progress on a terminal; none in a pipe."""
+    if not sys.stderr.isatty():
+        yield None, None
+        return
+    from mcx.report.progress import Bar
+
+    with Bar() as bar:
+        yield bar.progress, bar.notice

@@ -1,0 +1,50 @@
+"""An estimate: a mean with its standard error, and what can be asked of it."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+NORMAL_95 = 1.959963984540054  # the 97.5 % point of the standard normal
+ROUNDING = 1e-12  # relative
+
+
+@dataclass(frozen=True, slots=True)
+class Estimate:
+    """The mean of `paths` independent paths and the standard error of that mean."""
+
+    value: float
+    standard_error: float
+    paths: int
+
+    @property
+    def half_width(self) -> float:
+        """Half the width of the 95 % interval."""
+        return NORMAL_95 * self.standard_error
+
+    @property
+    def interval95(self) -> tuple[float, float]:
+        """The 95 % confidence interval, by the normal law."""
+        return self.value - self.half_width, self.value + self.half_width
+
+    def z(self, truth: float) -> float:
+        """The distance from a known value in standard errors: 0 where it is rounding, infinite for an exact estimate
+        that misses."""
+        distance = self.value - truth
+        if abs(distance) <= ROUNDING * abs(truth):
+            return 0.0
+        return distance / self.standard_error if self.standard_error > 0.0 else math.copysign(math.inf, distance)
+
+    def times(self, factor: float) -> Estimate:
+        """The estimate of a fixed multiple."""
+        return Estimate(self.value * factor, self.standard_error * abs(factor), self.paths)
+
+
+def estimates(paths: int, means: Sequence[float], squares: Sequence[float]) -> tuple[Estimate, ...]:
+    """Estimates from means and centred sums of squares, both of shape (outputs,); `paths` is at least 2."""
+    scale = paths * (paths - 1)
+    return tuple(
+        Estimate(float(mean), math.sqrt(max(float(square), 0.0) / scale), paths)
+        for mean, square in zip(means, squares, strict=True)
+    )

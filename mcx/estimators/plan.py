@@ -1,0 +1,172 @@
+"""How many paths a request needs, decided before the run that counts.
+
+`--paths` is taken as it is. `--within` asks for a 95 % half-width, and `--seconds` for a time: a pilot run from a
+stream of its own finds the spread, or the speed, and fixes the number; the main run then uses fresh numbers. Stopping
+a run when its own error looks small would be biased.
+"""
+
+from __future__ import annotations
+
+import math
+import re
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from mcx.estimators.estimate import NORMAL_95
+from mcx.faults import RequestError
+
+DEFAULT_PATHS = 1 << 20
+DEFAULT_SEED = 1
+FEWEST_PATHS = 2  # one path has no error
+MOST_PATHS = 1 << 40
+GROUP = 64  # paths are summed in groups of this size; planned numbers are whole groups
+FIRST_PILOT = 1 << 14
+LARGEST_PILOT = 1 << 20
+FEWEST_UNLIKE = 100  # paths of a pilot that must differ from the commonest value
+FEWEST_PLANNED = 1 << 14
+LONGEST_SECONDS = 7 * 86400.0
+WITHIN = re.compile(r"([0-9]*\.?[0-9]+(?:[eE][+-]?[0-9]+)?)\s*(bp|%)?")
+UNITS = {"bp": 1e-4, "%": 1e-2}
+
+
+@dataclass(frozen=True, slots=True)
+class Precision:
+    """What was asked for: at most one of a number of paths, a 95 % half-width and a time; none means DEFAULT_PATHS.
+
+    `within` is a fraction of the notional where `relative`, else an amount of money per unit.
+    """
+
+    paths: int | None = None
+    within: float | None = None
+    relative: bool = False
+    seconds: float | None = None
+    words: str = f"{DEFAULT_PATHS:,} paths, the number used where nothing is asked"
+
+
+@dataclass(frozen=True, slots=True)
+class Plan:
+    """The number of paths of the main run, and how it came about. `target` is the 95 % half-width, None without one."""
+
+    paths: int
+    pilot_paths: int
+    asked: str
+    target: float | None = None
+    warnings: tuple[str, ...] = ()
+
+
+def precision(paths: int | None, within: str | float | None, seconds: float | None) -> Precision:
+    """The request as one record; raises RequestError for meaningless numbers and for more than one wish."""
+    stated = [name for name, value in (("paths", paths), ("within", within), ("seconds", seconds)) if value is not None]
+    if len(stated) > 1:
+        raise RequestError(f"'{stated[0]}' and '{stated[1]}' cannot both decide the number of paths; give one of them")
+    if paths is not None:
+        return Precision(paths=_whole(paths), words=f"{paths:,} paths")
+    if seconds is not None:
+        return Precision(seconds=_time(seconds), words=f"{seconds:g} seconds")
+    return Precision() if within is None else _half_width(within)
+
+
+def _whole(paths: object) -> int:
+    if isinstance(paths, bool) or not isinstance(paths, int | np.integer):
+        raise RequestError(f"'paths' is a whole number of at least {FEWEST_PATHS}, not {paths!r}")
+    if not FEWEST_PATHS <= paths <= MOST_PATHS:
+        raise RequestError(f"'paths' is from {FEWEST_PATHS} (one path has no error) to {MOST_PATHS:,}, not {paths:,}")
+    return int(paths)
+
+
+def _time(seconds: object) -> float:
+    if isinstance(seconds, bool) or not isinstance(seconds, int | float) or not 0.0 < seconds <= LONGEST_SECONDS:
+        raise RequestError(f"'seconds' is a time above 0 and of at most {LONGEST_SECONDS:,.0f}, not {seconds!r}")
+    return float(seconds)
+
+
+def _half_width(within: object) -> Precision:
+    text = str(within).strip()
+    found = WITHIN.fullmatch(text)
+    number = float(found[1]) if found and not isinstance(within, bool) else 0.0
+    if not number or not math.isfinite(number):
+        raise RequestError(f"'within' is a half-width above 0: '2bp' or '0.02%' of the notional, or an amount of money "
+                           f"per unit such as '0.01'; not '{text}'")
+    unit = found[2] or ""
+    words = f"within {found[1]}{' ' + unit if unit else ''}"
+    return Precision(within=number * UNITS.get(unit, 1.0), relative=bool(unit), words=words)
+
+
+def check_fits(asked: Precision, *, notional: bool, title: str) -> None:
+    """Raises RequestError where a half-width is asked for in a unit that the contract's price does not have."""
+    if asked.within is None or asked.relative == notional:
+        return
+    if notional:
+        raise RequestError(f"'{title}' is priced in parts of its notional; ask for 'within' in bp or %, as '2bp'")
+    raise RequestError(f"'{title}' has no notional to take basis points of; ask for 'within' as an amount of money per "
+                       f"unit, as '0.01'")
+
+
+def plan(
+    asked: Precision,
+    prices: Callable[[int], np.ndarray],
+    seconds_for: Callable[[int], float],
+    exact: bool = False,
+) -> Plan:
+    """The plan for a request.
+
+    `prices(n)` gives the price of each of the first n paths of the pilot's stream, shape (n,); `seconds_for(n)` runs n
+    paths of that stream and gives the time they took; `exact`: the price is the same on every path.
+    """
+    if asked.seconds is not None:
+        return _by_time(asked, seconds_for)
+    if asked.within is None:
+        return Plan(asked.paths or DEFAULT_PATHS, 0, asked.words)
+    if exact:
+        return Plan(FEWEST_PLANNED, 0, asked.words, asked.within)
+    return _by_half_width(asked, prices)
+
+
+def _by_half_width(asked: Precision, prices: Callable[[int], np.ndarray]) -> Plan:
+    """The paths that bring the 95 % half-width below the target, by the upper end of what the variance may be."""
+    size = FIRST_PILOT
+    found = prices(size)
+    while unlike(found) < FEWEST_UNLIKE and size < LARGEST_PILOT:
+        size *= 4
+        found = prices(size)
+    warnings = []
+    if unlike(found) < FEWEST_UNLIKE:
+        warnings.append(f"of {size:,} pilot paths only {unlike(found)} differed from the rest: the number of paths for "
+                        f"the precision asked for cannot be planned well")
+    wanted = (NORMAL_95 / asked.within) ** 2 * upper_variance(found)
+    if warnings:
+        wanted = max(wanted, size)
+    paths = whole_groups(min(max(wanted, FEWEST_PLANNED), MOST_PATHS))
+    return Plan(paths, size, asked.words, asked.within, tuple(warnings))
+
+
+def unlike(prices: np.ndarray) -> int:
+    """How many paths differ from the commonest price."""
+    return len(prices) - int(np.unique(prices, return_counts=True)[1].max())
+
+
+def upper_variance(prices: np.ndarray) -> float:
+    """The variance of a path, plus two standard errors of that variance (from the fourth moment)."""
+    squares = (prices - prices.mean()) ** 2
+    return float(squares.mean() + 2.0 * squares.std() / math.sqrt(len(squares)))
+
+
+def _by_time(asked: Precision, seconds_for: Callable[[int], float]) -> Plan:
+    """The paths that the time allows, from a pilot enlarged until its time can be read off a clock."""
+    size, drawn = FIRST_PILOT, FIRST_PILOT
+    seconds_for(size)  # the first run also starts the threads and may compile
+    taken = seconds_for(size)
+    drawn += size
+    while taken < 0.05 * min(asked.seconds, 1.0) and size < LARGEST_PILOT:
+        size *= 4
+        taken = seconds_for(size)
+        drawn += size
+    paths = size * asked.seconds / max(taken, 1e-6)
+    return Plan(whole_groups(min(max(paths, GROUP), MOST_PATHS)), drawn, asked.words)
+
+
+def whole_groups(paths: float) -> int:
+    """The next whole number of groups of 64."""
+    return math.ceil(paths / GROUP) * GROUP

@@ -1,0 +1,107 @@
+"""A contract and a market to fill in for a definition: what is to be written is left empty, with a word about it.
+
+Loaded as it is, the text gives a fault for every blank and for nothing else.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from itertools import combinations
+
+from mcx.checked.formula import Formula, Name, walk
+from mcx.checked.payoff import Payoff, Term
+from mcx.report.settled import right_sides
+from mcx.report.wording import figure
+
+WIDTH = 34  # where the words about a blank begin
+BOUNDS = (("above", "above"), ("below", "below"), ("at_least", "at least"), ("at_most", "at most"))
+WRITTEN = {
+    "number": "a number",
+    "percent": "as 70% or 25 bp",
+    "level": "in the asset's currency",
+    "date": "as 2027-11-16",
+    "dates": "as {from: 2027-02-16, until: 2029-11-16, every: 3 months}, or a list",
+    "watch": "a date, dates, or {continuous: [2026-12-01, 2027-12-01]}",
+    "flag": "true or false",
+}
+
+
+def blank(payoff: Payoff, assets: Sequence[str]) -> str:
+    """The two documents as YAML text."""
+    return "\n".join((*_contract(payoff, assets), "---", *_market(assets))) + "\n"
+
+
+def _line(key: str, value: str = "", about: str = "", indent: int = 0) -> str:
+    written = f"{' ' * indent}{key}:{' ' + value if value else ''}"
+    return f"{written:<{WIDTH}} # {about}" if about else written
+
+
+def _uses_period(payoff: Payoff) -> bool:
+    """Whether anything in the definition goes by year fractions, so that a day count must be stated."""
+    formulas: list[Formula | None] = [let.formula for let in payoff.lets]
+    formulas += [running.formula for running in payoff.running]
+    formulas += [event.condition for event in payoff.events]
+    formulas += [right for event in payoff.events for action in (*event.then, *event.otherwise)
+                 for right in right_sides(action)]
+    parts = (part for formula in formulas if formula is not None for part in walk(formula))
+    return any(isinstance(part, Name) and part.name == "period" for part in parts)
+
+
+def _contract(payoff: Payoff, assets: Sequence[str]) -> Iterator[str]:
+    yield f"# A contract on the definition '{payoff.name}'. Fill in what stands empty."
+    yield f"contract: New {payoff.name.replace('_', ' ')} on {' and '.join(assets)}"
+    yield _line("currency", about="as EUR")
+    yield _line("notional", about="an amount; for payments in money per unit write 'units:' instead")
+    yield f"assets: [{', '.join(assets)}]"
+    yield _line("start", about="date from which periods and years count")
+    if _uses_period(payoff):
+        yield _line("day_count", about="as 30/360 or Actual/360")
+    yield _line("settlement", about="lag of payments, as 2 business days")
+    yield "calendar:"
+    yield _line("holidays", about="as ECB or XNYS, or none for weekends only", indent=2)
+    yield _line("roll", about="following, modified following or preceding", indent=2)
+    yield f"payoff: {payoff.name}"
+    yield "terms:"
+    for term in payoff.terms:
+        yield from _term(term, assets)
+
+
+def _term(term: Term, assets: Sequence[str]) -> Iterator[str]:
+    about = _about(term)
+    if term.optional or term.default is not None:
+        yield _line(f"# {term.name}", about=f"optional; {about}", indent=2)
+    elif len(assets) > 1 and (term.type == "level" or term.per == "assets"):
+        yield _line(term.name, about=about, indent=2)
+        for asset in assets:
+            yield _line(asset, indent=4)
+    else:
+        yield _line(term.name, about=about, indent=2)
+
+
+def _about(term: Term) -> str:
+    """What a term is, how it is written, and its bounds."""
+    written = " or ".join(term.choices) if term.type == "choice" else WRITTEN.get(term.type, "one of the assets")
+    if term.per and term.per != "assets" and term.type != "dates":
+        written += f", or a list for the dates of {term.per}"
+    elif term.type == "dates" and term.per:
+        written += f"; one for each of {term.per}"
+    bounds = [f"{word} {figure(getattr(term, key), term.type)}" for key, word in BOUNDS if getattr(term, key) is not None]
+    listed = ", ".join((written, *bounds))
+    return f"{term.about}: {listed}" if term.about else listed
+
+
+def _market(assets: Sequence[str]) -> Iterator[str]:
+    yield _line("market", about="the valuation date, as 2026-12-01")
+    yield _line("rates", about="by currency: {EUR: 2.1%} or {EUR: {1m: 2.0%, 1y: 2.1%, 3y: 2.35%}}")
+    yield _line("funding", about="by currency, the issuer's spread: {EUR: 80 bp}, or {EUR: 0 bp} for none")
+    yield "assets:"
+    for asset in assets:
+        yield f"  {asset}:"
+        yield _line("spot", about="today's level", indent=4)
+        yield _line("currency", about="as EUR", indent=4)
+        yield _line("yield", about="as 2.4% or {1y: 2.4%, 3y: 2.2%}", indent=4)
+        yield _line("vol", about="as 18% or {3m: 17%, 1y: 18%, 3y: 19%}", indent=4)
+    if len(assets) > 1:
+        yield "correlation:"
+        for first, second in combinations(assets, 2):
+            yield _line(f"{first}/{second}", about="as 65%", indent=2)

@@ -1,0 +1,129 @@
+"""What must stand beside a number: warnings about the run, assumptions, what the model leaves out, how to use it."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator
+
+from mcx.checked.formula import Previous, walk
+from mcx.checked.market import Curve, Market
+from mcx.dates.dated_contract import DatedContract
+from mcx.estimators.estimate import Estimate
+from mcx.estimators.price import Valuation
+from mcx.report.results import Martingale
+from mcx.report.settled import Settled, right_sides
+from mcx.tape.ops import Op
+from mcx.tape.program import Tape
+
+FEW_PATHS = 100
+LARGE_Z = 4.0
+
+
+def warnings(valuation: Valuation, tape: Tape, martingale: tuple[Martingale, ...], met: bool | None) -> Iterator[str]:
+    """What this run shows that a reader must know."""
+    if valuation.interrupted:
+        yield (f"interrupted after {valuation.price.paths:,} of {valuation.plan.paths:,} paths; the estimate is that of "
+               f"the paths so far")
+    yield from valuation.plan.warnings
+    if met is False and not valuation.interrupted:
+        yield (f"the precision asked for was not reached: the 95 % half-width is {valuation.price.half_width:.3g}, asked "
+               f"for was {valuation.plan.target:.3g}")
+    for output, estimate in valuation.of("condition"):
+        count = round(estimate.value * estimate.paths)
+        if not output.day and count < FEW_PATHS and tape.instructions[output.value].op is not Op.CONSTANT:
+            seen = "no path" if count == 0 else f"only {count} of {estimate.paths:,} paths"
+            yield f"{seen} met '{output.subject}': what depends on it is poorly known, and so is the error"
+    for test in martingale:
+        if abs(test.z) > LARGE_Z:
+            yield (f"the mean of {test.asset} is {abs(test.z):.1f} standard errors from its forward: this happens by "
+                   f"chance once in {_odds(test.z)} runs")
+    jump = _drift(valuation.stages)
+    if abs(jump) > LARGE_Z:
+        yield (f"the price moved by {abs(jump):.1f} standard errors between half and all of the paths: a few paths weigh "
+               f"heavily, and the error is not to be trusted")
+
+
+def _odds(z: float) -> str:
+    return f"{1.0 / max(math.erfc(abs(z) / math.sqrt(2.0)), 1e-15):,.0f}"
+
+
+def _drift(stages: tuple[Estimate, ...]) -> float:
+    """The last change of the price in standard errors of that change."""
+    if len(stages) < 2:
+        return 0.0
+    before, now = stages[-2:]
+    error = math.sqrt(max(before.standard_error**2 - now.standard_error**2, 0.0))
+    return (now.value - before.value) / error if error > 0.0 else 0.0
+
+
+def assumptions(dated: DatedContract, market: Market) -> Iterator[str]:
+    """What was taken as given without being said for this contract alone."""
+    yield from dated.assumptions
+    contract = dated.contract
+    if dated.calendar_version:
+        yield f"holidays as listed by {dated.calendar_version}"
+    paid = [due for moment in dated.moments for event in moment.events for due in event.due.values()]
+    end, last = dated.last, max([dated.last, *paid], key=lambda day: day.time)
+    curves = [(f"the rates of {contract.currency}", market.rates[contract.currency], last, "forward rate")]
+    if contract.currency in market.funding:
+        curves.append((f"the funding spreads of {contract.currency}", market.funding[contract.currency], last,
+                       "forward spread"))
+    for name in contract.assets:
+        asset = market.assets[name]
+        curves.append((f"the vols of {name}", asset.vol, end, "vol"))
+        for curve, what, held in ((asset.dividend_yield, "yields", "forward yield"), (asset.forwards, "forwards", "growth")):
+            if curve is not None:
+                curves.append((f"the {what} of {name}", curve, end, held))
+    for what, curve, day, held in curves:
+        if _ends_before(curve, day.time):
+            yield f"{what} end at {curve.nodes[-1].label}; the last {held} is held to {day}"
+
+
+def _ends_before(curve: Curve, time: float) -> bool:
+    return not curve.flat and curve.nodes[-1].time < time - 1e-9
+
+
+def limits(dated: DatedContract) -> Iterator[str]:
+    """What the model leaves out, as far as it touches this contract."""
+    contract, settled = dated.contract, Settled(dated.contract)
+    yield ("risk-neutral lognormal levels with one vol for each asset and tenor: no skew, no stochastic vol, no jumps; "
+           "rates and yields are known in advance")
+    if _turns(settled):
+        yield ("under skew the levels where this contract turns have vols of their own: price it with their vol too, and "
+               "read the two as a bracket")
+    if _looks_back(settled):
+        yield ("returns from one date to another live on forward vol and forward skew, which one vol for each tenor does "
+               "not say: indicative only")
+    if len(contract.assets) > 1:
+        yield "one fixed correlation for each pair of assets; in falls they usually move more together"
+    if contract.notional is not None:
+        yield ("no default before maturity beyond the funding spread, and no recovery; what is called protected is a "
+               "promise of the issuer")
+
+
+def _turns(settled: Settled) -> bool:
+    """Whether some event or running value hangs on levels passing a threshold."""
+    events = settled.contract.payoff.events
+    return any(settled.side(event) is None for event in events) or any(
+        running.how in ("ever", "always") or (running.formula is not None and running.formula.kind.is_flag)
+        for running in settled.running)
+
+
+def _looks_back(settled: Settled) -> bool:
+    """Whether a level is compared with one of an earlier date."""
+    formulas = [running.formula for running in settled.running if running.formula is not None]
+    formulas += list(settled.lets.values())
+    for event in settled.contract.payoff.events:
+        formulas += [right for action in settled.actions(event) for right in right_sides(action)]
+    return any(isinstance(part, Previous) for formula in formulas for part in walk(settled.formula(formula)))
+
+
+def cautions(dated: DatedContract, named: bool) -> Iterator[str]:
+    """How the number may be used; `named`: probabilities are shown."""
+    yield "the error covers sampling only: what the inputs and the model may be wrong by comes on top"
+    yield ("the contract file is somebody's reading of the terms: the legal terms and the calculation agent's "
+           "determinations prevail")
+    if named:
+        yield "probabilities are risk-neutral, not forecasts, and no performance scenarios for a client document"
+    yield ("an estimate to be reviewed by a licensed professional under local rules; not advice, not an offer, and no "
+           "price at which anybody has to deal")

@@ -1,0 +1,133 @@
+"""Given levels run through a contract: every payment, every condition, no model.
+
+The contract's own tape, still reading levels, is interpreted on one path. The tape pays in present values, so that one
+discount factor is set to 1 and all others to 0, for each payment day in turn (in one pass, as lanes): what is left of
+a leg is what it pays on that day.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping
+from dataclasses import replace
+
+import numpy as np
+
+from mcx.dates.dated_contract import DatedContract, Day
+from mcx.faults import Fault, Place
+from mcx.report.results import Met, PathResult, Payment
+from mcx.report.wording import joined
+from mcx.tape.formulas import figure
+from mcx.tape.interpret import interpret, outputs
+from mcx.tape.ops import Op
+from mcx.tape.passes import drop_dead_code
+from mcx.tape.program import Leaf, LeafKind, LevelKey, Tape
+from mcx.tape.steps import SAME_TIME
+
+CONTINUOUS = "{} is watched all the time; here only the given levels from {} to {} were looked at"
+
+
+def run_levels(
+    dated: DatedContract, tape: Tape, levels: Mapping[str, Mapping[Day, float]], file: str
+) -> tuple[PathResult | None, list[Fault]]:
+    """Every payment on given levels, by asset and day; the faults list every level that is missing.
+
+    `tape` is `Unrolled.observed`; `file` is where the levels come from, for the faults.
+    """
+    tape = replace(tape, outputs=tuple(output for output in tape.outputs if output.kind != "level"))
+    tape = drop_dead_code(tape)
+    reader = _Reader(dated, levels)
+    wanted = {(step.op, step.payload): None for step in tape.instructions if isinstance(step.payload, LevelKey)}
+    read = {(op, key): reader.level(op, key) for op, key in wanted}
+    if reader.missing:
+        return None, reader.faults(file)
+    due = tuple(leaf for leaf in tape.leaves if leaf.kind is LeafKind.DISCOUNT)
+    values = interpret(tape, [_leaf(leaf, due, dated) for leaf in tape.leaves], levels=read)
+    found = {name: np.broadcast_to(value, (max(len(due), 1),)) for name, value in outputs(tape, values).items()}
+    return _result(dated, tape, found, due, reader.notes()), []
+
+
+class _Reader:
+    """Looks up levels by the tape's keys and remembers what was not given."""
+
+    def __init__(self, dated: DatedContract, levels: Mapping[str, Mapping[Day, float]]):
+        self.dated = dated
+        self.given = {
+            number: sorted((day.time, level) for day, level in levels.get(asset, {}).items())
+            for number, asset in enumerate(dated.contract.assets)
+        }
+        self.missing: dict[int, set[float]] = {}
+        self.watched: dict[tuple[int, float], float] = {}  # asset, start -> end
+
+    def level(self, op: Op, key: LevelKey) -> float:
+        """The level that a key reads: on its day, or the extreme of all that are given within its stretch."""
+        found = [level for time, level in self.given[key.asset]
+                 if (key.start if op is not Op.LEVEL else key.time) - SAME_TIME <= time <= key.time + SAME_TIME]
+        ends = (key.time,) if op is Op.LEVEL else (key.start, key.time)
+        if op is not Op.LEVEL:
+            self.watched[key.asset, key.start] = max(key.time, self.watched.get((key.asset, key.start), 0.0))
+        times = [time for time, _ in self.given[key.asset]]
+        for end in ends:
+            if not any(abs(time - end) <= SAME_TIME for time in times):
+                self.missing.setdefault(key.asset, set()).add(end)
+        if not found:
+            return np.nan
+        return {Op.LEVEL: found[-1], Op.LOW: min(found), Op.HIGH: max(found)}[op]
+
+    def faults(self, file: str) -> list[Fault]:
+        """One fault for each asset, with every date that has no level."""
+        names = self.dated.contract.assets
+        return [
+            Fault(Place(file, 1, 1), f"no level of '{names[asset]}' for {joined(self._days(times))}; a level is needed "
+                                     f"on every date that the contract looks at")
+            for asset, times in sorted(self.missing.items())
+        ]
+
+    def notes(self) -> tuple[str, ...]:
+        names = self.dated.contract.assets
+        stretches: dict[int, tuple[float, float]] = {}
+        for (asset, start), end in self.watched.items():
+            before = stretches.get(asset, (start, end))
+            stretches[asset] = min(before[0], start), max(before[1], end)
+        return tuple(CONTINUOUS.format(names[asset], *self._days(ends)) for asset, ends in sorted(stretches.items()))
+
+    def _days(self, times: Iterable[float]) -> list[str]:
+        return [day_of(time, self.dated) for time in sorted(times)]
+
+
+def day_of(time: float, dated: DatedContract) -> str:
+    """The contract's day at a time on its tape."""
+    known = [moment.day for moment in dated.moments]
+    known += [day for watch in dated.watches for day in (watch.start, watch.end)]
+    known += [due for moment in dated.moments for event in moment.events for due in event.due.values()]
+    near = min(known, key=lambda day: abs(day.time - time))
+    return str(near if abs(near.time - time) <= SAME_TIME else Day(time))
+
+
+def _leaf(leaf: Leaf, due: tuple[Leaf, ...], dated: DatedContract) -> float | np.ndarray:
+    if leaf.kind is LeafKind.DISCOUNT:
+        return np.array([float(leaf == each) for each in due])
+    return figure(dated.contract, leaf)
+
+
+def _result(dated: DatedContract, tape: Tape, found: dict, due: tuple[Leaf, ...], notes: tuple[str, ...]) -> PathResult:
+    size = dated.contract.size
+    payments = [
+        Payment(day_of(leaf.end, dated), output.subject, float(found[output.name][lane]),
+                float(found[output.name][lane]) * size)
+        for lane, leaf in sorted(enumerate(due), key=lambda item: item[1].end)
+        for output in tape.outputs
+        if output.kind == "leg" and found[output.name][lane] != 0.0
+    ]
+    held = [output for output in tape.outputs if output.kind == "condition" and not output.day]
+    dates = {output.subject: [] for output in held}
+    for output in tape.outputs:
+        if output.kind == "condition" and output.day and found[output.name][0]:
+            dates[output.subject].append(output.day)
+    ended = [output.day for output in tape.outputs if output.kind == "end" and found[output.name][0]]
+    return PathResult(
+        payments=tuple(payments),
+        total=sum(payment.amount for payment in payments),
+        conditions=tuple(Met(each.subject, bool(found[each.name][0]), tuple(dates[each.subject])) for each in held),
+        ended=ended[0] if ended else "",
+        notes=notes,
+    )

@@ -1,0 +1,324 @@
+"""The results of every verb, and the keys of their JSON: `to_dict()` gives one key for each field, in this order.
+
+Units. `price`, `standard_error` and `interval95` are in the unit that `unit` names: 'notional' (1.0 is par) or
+'currency per unit'. `value...` is in the contract's currency for the whole notional or number of units. Probabilities
+and discount factors are plain numbers (0.25 is 25 %), times are years (Actual/365 Fixed), vols are per year, dates are
+ISO dates, or times such as '0.25y' in textbook contracts. Errors are standard errors of the sampling alone.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass, fields, is_dataclass
+
+
+class Result:
+    """A frozen record that can say itself as plain data."""
+
+    __slots__ = ()
+
+    def to_dict(self) -> dict:
+        """Plain dicts, lists, texts and numbers, ready for `json.dumps`; what is not a finite number becomes None."""
+        return {field.name: plain(getattr(self, field.name)) for field in fields(self)}
+
+
+def plain(value: object) -> object:
+    """A value as JSON holds it."""
+    if is_dataclass(value):
+        return {field.name: plain(getattr(value, field.name)) for field in fields(value)}
+    if isinstance(value, dict):
+        return {key: plain(inner) for key, inner in value.items()}
+    if isinstance(value, tuple | list):
+        return [plain(inner) for inner in value]
+    if isinstance(value, float):
+        return float(value) if math.isfinite(value) else None
+    return value
+
+
+@dataclass(frozen=True, slots=True)
+class Amount(Result):
+    """A leg (`as:`) or a part (`part:`) of the price. The legs add up to the price, and so do the parts."""
+
+    name: str
+    price: float
+    standard_error: float
+    value: float
+
+
+@dataclass(frozen=True, slots=True)
+class Likelihood(Result):
+    """How often something happened: on `date` (a date, a year or a span of years), or ever where it is ''."""
+
+    date: str
+    probability: float
+    standard_error: float
+
+
+@dataclass(frozen=True, slots=True)
+class Condition(Result):
+    """A named event: how often its condition held at all, and on each date (an empty list beyond 64 dates)."""
+
+    name: str
+    probability: float
+    standard_error: float
+    dates: tuple[Likelihood, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Martingale(Result):
+    """The mean simulated level of an asset at its last observed time over its forward; z is its distance from 1 in
+    standard errors."""
+
+    asset: str
+    date: str
+    mean_over_forward: float
+    standard_error: float
+    z: float
+
+
+@dataclass(frozen=True, slots=True)
+class Stage(Result):
+    """The price of the first `paths` paths."""
+
+    paths: int
+    price: float
+    standard_error: float
+
+
+@dataclass(frozen=True, slots=True)
+class Checks(Result):
+    """What a result says about itself: a martingale test for each asset, and the price at a quarter, half and all of
+    the paths."""
+
+    martingale: tuple[Martingale, ...]
+    convergence: tuple[Stage, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Planned(Result):
+    """How the number of paths came about.
+
+    `asked` repeats the request ('131072 paths', 'within 2 bp', '3 seconds'); `target` is the 95 % half-width asked for
+    with `within`, in the unit of the price, else None; `met` whether the result keeps it, None without a target;
+    `pilot_paths` were drawn from a stream of their own and are not part of the result.
+    """
+
+    asked: str
+    paths: int
+    pilot_paths: int
+    target: float | None
+    met: bool | None
+
+
+@dataclass(frozen=True, slots=True)
+class PriceResult(Result):
+    """What a contract is worth: `mcx price`.
+
+    `notional` or `units` is None. `valuation` is None for textbook markets. `ends` holds how often the contract ended
+    early on each date, `reached_maturity` how often it did not, and `expected_life` the years to the payment that ends
+    it. `warnings` are about this run, `assumptions` what was taken as given, `limits` what the model leaves out,
+    `cautions` how the number may be used.
+    """
+
+    contract: str
+    payoff: str
+    valuation: str | None
+    currency: str
+    notional: float | None
+    units: float | None
+    unit: str
+    price: float
+    standard_error: float
+    interval95: tuple[float, float]
+    value: float
+    value_standard_error: float
+    paths: int
+    seconds: float
+    seed: int
+    reduction: str
+    interrupted: bool
+    planned: Planned
+    legs: tuple[Amount, ...]
+    parts: tuple[Amount, ...]
+    conditions: tuple[Condition, ...]
+    ends: tuple[Likelihood, ...]
+    reached_maturity: Likelihood
+    expected_life: float
+    expected_life_standard_error: float
+    checks: Checks
+    warnings: tuple[str, ...]
+    assumptions: tuple[str, ...]
+    limits: tuple[str, ...]
+    cautions: tuple[str, ...]
+    calendar_version: str
+
+
+@dataclass(frozen=True, slots=True)
+class PriceTable(Result):
+    """Several contracts on one market, in the order of the files."""
+
+    prices: tuple[PriceResult, ...]
+
+    @property
+    def interrupted(self) -> bool:
+        return any(price.interrupted for price in self.prices)
+
+
+@dataclass(frozen=True, slots=True)
+class TermLine(Result):
+    """A term of the contract: its value as words."""
+
+    name: str
+    type: str
+    value: str
+    about: str
+
+
+@dataclass(frozen=True, slots=True)
+class Sentence(Result):
+    """What a `let` name or a running value means."""
+
+    name: str
+    text: str
+
+
+@dataclass(frozen=True, slots=True)
+class EventLine(Result):
+    """What happens: `ends_here` says of a date on which the contract ends whether this event still happens on it."""
+
+    name: str
+    text: str
+    ends_here: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class DateLine(Result):
+    """One thing that happens on one date. `nth` counts in its schedule; `terms` are the numbers of that date; `paid`
+    when an amount would be paid, '' where nothing is."""
+
+    date: str
+    nth: int
+    what: str
+    terms: str
+    paid: str
+
+
+@dataclass(frozen=True, slots=True)
+class WatchLine(Result):
+    """How something is watched. `law`: 'exact', 'refused' or 'unread' (nothing depends on it)."""
+
+    name: str
+    when: str
+    law: str
+    reason: str
+
+
+@dataclass(frozen=True, slots=True)
+class AssetDate(Result):
+    """An asset on a date: its forward, and its Black vol from the valuation date to it."""
+
+    asset: str
+    forward: float
+    vol: float
+
+
+@dataclass(frozen=True, slots=True)
+class MarketDate(Result):
+    """The market on one date; `assets` is empty where nothing is observed (a payment day)."""
+
+    date: str
+    discount_factor: float
+    funded_discount_factor: float
+    assets: tuple[AssetDate, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Payment(Result):
+    """An amount paid on a given path, undiscounted, in the unit of the price (`amount`) and in currency (`value`)."""
+
+    date: str
+    leg: str
+    amount: float
+    value: float
+
+
+@dataclass(frozen=True, slots=True)
+class Met(Result):
+    """Whether a named condition held on a given path, and on which dates (not listed beyond 64 dates)."""
+
+    name: str
+    held: bool
+    dates: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class PathResult(Result):
+    """Given levels run through the contract: every payment that is not 0, every named condition, and the date (or
+    year) in which the contract ended early, '' if it did not. `notes` say how the levels were taken."""
+
+    payments: tuple[Payment, ...]
+    total: float
+    conditions: tuple[Met, ...]
+    ended: str
+    notes: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Readback(Result):
+    """What a contract says: `mcx readback`. `market` is empty without a market, `path` None without given levels."""
+
+    contract: str
+    payoff: str
+    about: str
+    facts: tuple[Sentence, ...]
+    terms: tuple[TermLine, ...]
+    lets: tuple[Sentence, ...]
+    running: tuple[Sentence, ...]
+    events: tuple[EventLine, ...]
+    watches: tuple[WatchLine, ...]
+    dates: tuple[DateLine, ...]
+    assumptions: tuple[str, ...]
+    market: tuple[MarketDate, ...]
+    path: PathResult | None
+
+
+@dataclass(frozen=True, slots=True)
+class ReadbackTable(Result):
+    """Several contracts."""
+
+    readbacks: tuple[Readback, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Definition(Result):
+    """A payoff definition of the library; `assets` is how many it takes."""
+
+    name: str
+    about: str
+    assets: str
+    text: str
+
+
+@dataclass(frozen=True, slots=True)
+class Library(Result):
+    """The definitions there are: `mcx payoffs`."""
+
+    payoffs: tuple[Definition, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Replay(Result):
+    """Whether a stored valuation reproduces: `mcx replay`.
+
+    `identical`: every number, name and date is the same, to the last bit on the same type of processor, within 1e-12
+    elsewhere. `largest_difference` is the largest of |difference| / max(1, |stored|); `first_difference` names the first
+    result that differs ('' where none does), with what was stored and found. `changed` lists what is not as it was when
+    the record was written: versions, source and processor.
+    """
+
+    identical: bool
+    largest_difference: float
+    first_difference: str
+    stored: float | str | None
+    found: float | str | None
+    changed: tuple[str, ...]

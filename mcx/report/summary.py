@@ -1,0 +1,103 @@
+"""From estimates to the result of `mcx price`."""
+
+from __future__ import annotations
+
+import math
+
+from mcx.checked.market import Market
+from mcx.estimators.estimate import Estimate
+from mcx.estimators.price import Ready, Valuation
+from mcx.report.cautions import assumptions, cautions, limits, warnings
+from mcx.report.given_path import day_of
+from mcx.report.results import (
+    Amount,
+    Checks,
+    Condition,
+    Likelihood,
+    Martingale,
+    Planned,
+    PriceResult,
+    Stage,
+)
+
+NO_REDUCTION = "none"
+
+
+def price_result(ready: Ready, market: Market, valuation: Valuation) -> PriceResult:
+    """Everything that a valuation says, with its checks and what must stand beside it."""
+    dated, contract = ready.dated, ready.dated.contract
+    price, plan = valuation.price, valuation.plan
+    met = None if plan.target is None else price.half_width <= plan.target
+    martingale = _martingale(ready, valuation)
+    conditions = _conditions(valuation)
+    ends = tuple(_likelihood(output.day, estimate) for output, estimate in valuation.of("end"))
+    life = next(estimate for _, estimate in valuation.of("life"))
+    return PriceResult(
+        contract=contract.title,
+        payoff=contract.payoff.name,
+        valuation=None if dated.valuation is None else dated.valuation.isoformat(),
+        currency=contract.currency,
+        notional=contract.notional,
+        units=contract.units,
+        unit="notional" if contract.notional is not None else "currency per unit",
+        price=price.value,
+        standard_error=price.standard_error,
+        interval95=price.interval95,
+        value=price.value * contract.size,
+        value_standard_error=price.standard_error * contract.size,
+        paths=price.paths,
+        seconds=valuation.seconds,
+        seed=valuation.seed,
+        reduction=NO_REDUCTION,
+        interrupted=valuation.interrupted,
+        planned=Planned(plan.asked, plan.paths, plan.pilot_paths, plan.target, met),
+        legs=_amounts(valuation, "leg", contract.size),
+        parts=_amounts(valuation, "part", contract.size),
+        conditions=conditions,
+        ends=ends,
+        reached_maturity=_not_ended(ends, price.paths),
+        expected_life=life.value,
+        expected_life_standard_error=life.standard_error,
+        checks=Checks(martingale, tuple(Stage(e.paths, e.value, e.standard_error) for e in valuation.stages)),
+        warnings=tuple(warnings(valuation, ready.unrolled.tape, martingale, met)),
+        assumptions=tuple(dict.fromkeys(assumptions(dated, market))),
+        limits=tuple(limits(dated)),
+        cautions=tuple(cautions(dated, bool(conditions or ends))),
+        calendar_version=dated.calendar_version,
+    )
+
+
+def _amounts(valuation: Valuation, kind: str, size: float) -> tuple[Amount, ...]:
+    return tuple(Amount(output.subject, estimate.value, estimate.standard_error, estimate.value * size)
+                 for output, estimate in valuation.of(kind))
+
+
+def _likelihood(date: str, estimate: Estimate) -> Likelihood:
+    return Likelihood(date, estimate.value, estimate.standard_error)
+
+
+def _conditions(valuation: Valuation) -> tuple[Condition, ...]:
+    found = list(valuation.of("condition"))
+    return tuple(
+        Condition(output.subject, ever.value, ever.standard_error,
+                  tuple(_likelihood(each.day, estimate) for each, estimate in found
+                        if each.day and each.subject == output.subject))
+        for output, ever in found if not output.day
+    )
+
+
+def _not_ended(ends: tuple[Likelihood, ...], paths: int) -> Likelihood:
+    """How often the contract did not end early: the ends exclude one another."""
+    chance = min(max(1.0 - sum(end.probability for end in ends), 0.0), 1.0)
+    return Likelihood("", chance, math.sqrt(chance * (1.0 - chance) / max(paths - 1, 1)))
+
+
+def _martingale(ready: Ready, valuation: Valuation) -> tuple[Martingale, ...]:
+    """Each asset's mean level over its forward, at the last time it is observed."""
+    found = []
+    for output, estimate in valuation.of("level"):
+        _, time = ready.unrolled.levels[output.name]
+        ratio = estimate.times(1.0 / ready.market.forward(output.subject, time))
+        found.append(Martingale(output.subject, day_of(time, ready.dated), ratio.value, ratio.standard_error,
+                                ratio.z(1.0)))
+    return tuple(found)

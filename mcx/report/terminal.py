@@ -1,0 +1,81 @@
+"""What all terminal views share: the console, headings, tables and paragraphs. Plain text in a pipe, 80 columns."""
+
+from __future__ import annotations
+
+import math
+import re
+import sys
+from collections.abc import Iterable, Sequence
+
+from rich.console import Console
+from rich.padding import Padding
+from rich.table import Table
+from rich.text import Text
+
+NUMBER = "right"
+MOST_DECIMALS = 10
+
+
+class Page:
+    """A view that grows from top to bottom and is written to standard output whole, without spaces at line ends."""
+
+    def __init__(self) -> None:
+        self.console = Console(highlight=False, markup=False, emoji=False)
+        self._capture = self.console.capture()
+        self._capture.__enter__()
+
+    def write(self) -> None:
+        """Writes the page; nothing can be added after that."""
+        self._capture.__exit__(None, None, None)
+        sys.stdout.write(re.sub(" +$", "", self._capture.get(), flags=re.MULTILINE))
+
+    def heading(self, text: str) -> None:
+        self.console.print()
+        self.console.print(Text(text, style="bold"))
+
+    def line(self, text: str = "", style: str = "") -> None:
+        """A paragraph, wrapped at the width of the page."""
+        self.console.print(Text(text, style=style))
+
+    def items(self, texts: Iterable[str], sign: str = "-") -> None:
+        """Paragraphs behind dashes, or behind another sign."""
+        for text in texts:
+            grid = Table.grid(padding=(0, 1))
+            grid.add_row(sign, Text(text))
+            self.console.print(grid)
+
+    def named(self, pairs: Iterable[tuple[str, str]]) -> None:
+        """Names with what is said of them."""
+        grid = Table.grid(padding=(0, 2))
+        grid.add_column(max_width=24)
+        grid.add_column()
+        for name, text in pairs:
+            grid.add_row(Text(name), Text(text))
+        self.console.print(grid)
+
+    def table(self, heads: Sequence[str], rows: Iterable[Sequence[str]], words: int = 1) -> None:
+        """A table whose first `words` columns hold words; the others hold numbers, aligned right."""
+        table = Table(box=None, pad_edge=False, padding=(0, 2, 0, 0), header_style="bold")
+        for number, head in enumerate(heads):
+            if number < words:
+                table.add_column(head, overflow="fold")
+            else:
+                table.add_column(head, justify=NUMBER, no_wrap=True)
+        for row in rows:
+            table.add_row(*(Text(cell) for cell in row))
+        self.console.print(Padding(table, (0, 0, 0, 2)))
+
+
+def decimals(error: float, digits: int, fewest: int) -> int:
+    """How many decimals show `digits` significant digits of an error, at least `fewest`; 6 for an error of 0."""
+    if not error > 0.0 or not math.isfinite(error):
+        return max(fewest, 6 if digits > 1 else fewest)
+    return min(max(digits - 1 - math.floor(math.log10(error)), fewest), MOST_DECIMALS)
+
+
+def fixed(number: float, places: int, unit: str = "") -> str:
+    """A number with thousands separated; never '-0.00'."""
+    text = f"{number:,.{places}f}"
+    if text.startswith("-") and not text.strip("-0.,"):
+        text = text[1:]
+    return f"{text} {unit}" if unit else text
