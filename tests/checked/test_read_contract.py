@@ -177,8 +177,8 @@ SLIPS = [
                          "'30/360' or '30E/360', found '30/365'; did you mean '30/360'?"),
     ("2 business days", "2 days", "7:13: expected a number of business days, as '2 business days', found '2 days'"),
     ("settlement: 2 business days\n", "", "1:1: 'settlement' is missing in the contract"),
-    ("roll: modified following", "roll: modified", "8:33: expected a roll convention: 'following', 'modified following' "
-                                                   "or 'preceding', found 'modified'"),
+    ("roll: modified following", "roll: modified", "8:33: expected a roll convention: 'following', 'modified "
+                                                   "following' or 'preceding', found 'modified'; did you mean 'modified following'?"),
     ("holidays: ECB, ", "", "8:11: 'holidays' is missing in the calendar"),
     ("payoff: sampler", "payoff: sampller", "9:9: there is no payoff 'sampller'; did you mean 'sampler'?"),
     ("day_count: 30/360", "day_count: 30/360\nhappened: {hit: true}",
@@ -229,12 +229,12 @@ SLIPS = [
     ("until: 2027-08-16, every: 3 months", "until: 2027-08-16, evry: 3 months",
      "12:10: 'every' is missing in the date rule 'dates'"),
     ("every: 3 months", "every: 3 month ends",
-     "12:48: expected a period such as '3 months' or '1 business day', found '3 month ends'"),
-    ("every: 3 months", "every: 0 months", "12:48: expected a step of at least 1, found '0 months'"),
+     "12:55: expected a period such as '3 months' or '1 business day', found '3 month ends'"),
+    ("every: 3 months", "every: 0 months", "12:55: expected a step of at least 1, found '0 months'"),
     ("every: 3 months", "count: 3", "12:10: equal steps ('count') are for times; with calendar dates write "
                                     "'{from: ..., until: ..., every: 3 months}'"),
     ("every: 3 months", "every: 3 months, count: 3",
-     "12:58: the date rule 'dates' has both 'every' and 'count'; keep one"),
+     "12:65: the date rule 'dates' has both 'every' and 'count'; keep one"),
     ("{from: 2027-02-16, until", "{until", "12:10: 'from' is missing in the date rule"),
     ("{from: 2027-02-16, until: 2027-08-16, every: 3 months}", "{continuous: [2027-02-16, 2027-08-16]}",
      "12:11: 'dates' is a list of dates; only a watch term can be continuous"),
@@ -297,4 +297,4 @@ def test_all_faults_at_once():
 def test_faults_of_the_definition_are_told_too():
     """A contract on a definition at fault is refused with the definition's faults at their places."""
     _, faults = parsed(WHOLE, DEFINITION.replace("pay: period", "pay: perriod"))
-    assert faults == ["d.yaml:22:14: there is no name 'perriod'; did you mean 'period'?"]
+    assert faults == ["d.yaml:22:14: there is no 'perriod' here; did you mean 'period'?"]

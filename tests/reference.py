@@ -1,0 +1,337 @@
+"""A second, plain implementation: one path of a dated contract at a time, in plain Python.
+
+It shares with `mcx` the checked documents and the dates, and nothing after them: formulas are evaluated recursively
+from their trees, the market is worked out in `plain_market.py`, and nothing is unrolled, folded, vectorised or
+compiled. Given the numbers that the machine drew for a path, it must find the machine's payments to rounding.
+
+Read `Reference.path` first, then `Walk`.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, field
+
+from plain_market import PlainMarket, bridge_high, bridge_low
+
+from mcx.checked import formula as trees
+from mcx.checked.contract import Figures, Word
+from mcx.checked.market import Market
+from mcx.checked.payoff import Assign, End, Event, Pay, Running
+from mcx.dates.dated_contract import DatedContract, DatedEvent, Moment, Occasion, Update, Watch
+from mcx.faults import Place
+
+Value = float | bool | tuple  # a number, a flag, or one of them for each asset
+
+BINARY: dict[str, Callable] = {
+    "+": lambda a, b: a + b, "-": lambda a, b: a - b, "*": lambda a, b: a * b, "/": lambda a, b: a / b,
+    "**": lambda a, b: a**b, "<": lambda a, b: a < b, "<=": lambda a, b: a <= b, ">": lambda a, b: a > b,
+    ">=": lambda a, b: a >= b, "==": lambda a, b: a == b, "!=": lambda a, b: a != b,
+    "and": lambda a, b: bool(a) and bool(b), "or": lambda a, b: bool(a) or bool(b),
+}
+ELEMENTWISE: dict[str, Callable] = {
+    "min": min, "max": max, "abs": abs, "exp": math.exp, "log": math.log, "sqrt": math.sqrt,
+    "clip": lambda x, low, high: min(max(x, low), high),
+}
+OVER_ASSETS: dict[str, Callable] = {
+    "worst": min, "best": max, "mean": lambda x: sum(x) / len(x), "any": any, "all": all,
+    "basket": lambda x, weights: sum(row_of(elementwise(BINARY["*"], x, weights))),
+    "ranked": lambda x, k: sorted(x)[round(k) - 1],
+}
+JOIN: dict[str, Callable] = {
+    "average": BINARY["+"], "total": BINARY["+"], "product": BINARY["*"], "lowest": min, "highest": max,
+    "ever": BINARY["or"], "always": BINARY["and"], "latest": lambda old, new: new,
+}
+SAME_TIME = 1e-9  # years
+TINY, HUGE = 1e-9, 1e9  # levels far below and far above any that a contract speaks of
+
+
+def row_of(value: Value) -> tuple:
+    """A value as one entry for each asset."""
+    return value if isinstance(value, tuple) else (value,)
+
+
+def plain(values: Sequence) -> Value:
+    """One entry for each asset; with one asset that is a plain value."""
+    return values[0] if len(values) == 1 else tuple(values)
+
+
+def elementwise(function: Callable, *values: Value) -> Value:
+    """The function of plain values, asset by asset where any of them has one for each asset."""
+    count = max(len(row_of(value)) for value in values)
+    spread = [value if isinstance(value, tuple) else (value,) * count for value in values]
+    rows = [function(*row) for row in zip(*spread, strict=True)]
+    return tuple(rows) if any(isinstance(value, tuple) for value in values) else rows[0]
+
+
+@dataclass
+class Result:
+    """What one path paid: discounted amounts by leg, and the names of the events whose condition held."""
+
+    legs: dict[str, float] = field(default_factory=dict)
+    met: set[str] = field(default_factory=set)
+    ended: float | None = None  # when an `end` was reached
+
+    @property
+    def price(self) -> float:
+        return sum(self.legs.values())
+
+
+class Walk:
+    """The state of one path while it walks along the contract."""
+
+    def __init__(self, dated: DatedContract, market: PlainMarket):
+        self.contract, self.payoff, self.market = dated.contract, dated.contract.payoff, market
+        self.lets = {let.name: let.formula for let in self.payoff.lets}
+        self.running = {running.name: running for running in self.payoff.running}
+        self.values: dict[str, Value] = {}
+        self.counts: dict[str, int] = {}
+        self.remembered: dict[tuple[Place, int], Value] = {}
+        self.spot: Value | None = None
+        self.occasion: Occasion | None = None
+        self.owner: Place | None = None
+        self.result = Result()
+        for running in self.payoff.running:
+            if running.start is not None:
+                self.values[running.name], self.counts[running.name] = self.evaluate(running.start), 1
+
+    def evaluate(self, node: trees.Formula) -> Value:
+        """The value of a formula on this date of this path."""
+        match node:
+            case trees.Number(value=value, kind=kind):
+                return bool(value) if kind.is_flag else value
+            case trees.Name(name=name):
+                return self.named(name)
+            case trees.ChoiceIs(term=term, word=word, negated=negated):
+                return (self.contract.terms[term].text == word) != negated
+            case trees.Given(term=term):
+                return term in self.contract.terms
+            case trees.Unary(symbol="-", operand=operand):
+                return elementwise(lambda x: -x, self.evaluate(operand))
+            case trees.Unary(operand=operand):
+                return elementwise(lambda x: not x, self.evaluate(operand))
+            case trees.Binary(symbol="and" | "or" as symbol, left=left, right=right):
+                first = self.evaluate(left)
+                if not isinstance(first, tuple) and bool(first) == (symbol == "or"):
+                    return first  # decided: the other side need not have a value
+                return elementwise(BINARY[symbol], first, self.evaluate(right))
+            case trees.Binary(symbol=symbol, left=left, right=right):
+                return elementwise(BINARY[symbol], self.evaluate(left), self.evaluate(right))
+            case trees.IfElse(condition=condition, yes=yes, no=no):
+                chosen = self.evaluate(condition)
+                if not isinstance(chosen, tuple):  # only the branch that is taken need have a value
+                    return self.evaluate(yes if chosen else no)
+                return elementwise(lambda c, a, b: a if c else b, chosen, self.evaluate(yes), self.evaluate(no))
+            case trees.Call(function=function, arguments=arguments) if function in OVER_ASSETS:
+                first, *others = map(self.evaluate, arguments)
+                everyone = first if isinstance(first, tuple) else (first,) * len(self.contract.assets)
+                return OVER_ASSETS[function](everyone, *others)
+            case trees.Call(function=function, arguments=arguments):
+                return elementwise(ELEMENTWISE[function], *map(self.evaluate, arguments))
+            case trees.OfAsset(operand=operand, asset=asset):
+                name = asset if asset in self.contract.assets else self.contract.terms[asset].text
+                value = self.evaluate(operand)
+                return value[self.contract.assets.index(name)] if isinstance(value, tuple) else value
+            case trees.Previous(first=first):
+                if self.occasion.earlier is None:
+                    return self.evaluate(first)
+                return self.remembered[self.owner, id(node)]
+        raise TypeError(f"no meaning for {node!r}")
+
+    def named(self, name: str) -> Value:
+        """The value of a name on this date."""
+        if name == "spot":
+            if self.spot is None:
+                raise LookupError(f"the level on {self.occasion.day} is not on the grid")
+            return self.spot
+        if name in ("nth", "n_dates", "years", "period"):
+            return float(getattr(self.occasion, name))
+        if name in self.lets:
+            return self.evaluate(self.lets[name])
+        if name in self.running:
+            value = self.values[name]
+            averaged = self.running[name].how == "average"
+            return elementwise(lambda total: total / self.counts[name], value) if averaged else value
+        match self.contract.terms[name]:
+            case Figures(rows=rows, per_date=False):
+                return plain(rows[0])
+            case Figures(rows=rows):
+                return plain(rows[self.occasion.dates[self.payoff.term(name).per]])
+            case Word(text=text):
+                return text == "true"
+        raise TypeError(f"'{name}' has no value in a formula")
+
+    def look(self, occasion: Occasion | None, owner: Running | Event, levels: Value | None) -> None:
+        """Formulas now speak of these levels and of this occasion of this running value or event."""
+        self.occasion, self.owner, self.spot = occasion, owner.place, levels
+
+    def remember(self, formulas: Sequence[trees.Formula]) -> None:
+        """Keep what `previous` will ask for on the next date of this running value or event."""
+        queue, fresh = list(formulas), {}
+        while queue:
+            for node in trees.walk(queue.pop()):
+                if isinstance(node, trees.Name) and node.name in self.lets:
+                    queue.append(self.lets[node.name])
+                elif isinstance(node, trees.Previous):
+                    fresh[self.owner, id(node)] = self.evaluate(node.operand)
+        self.remembered |= fresh
+
+    def observe(self, running: Running) -> None:
+        """One more observation enters a running value."""
+        value = self.evaluate(running.formula)
+        if running.how in ("total", "average", "product"):
+            value = elementwise(float, value)
+        name = running.name
+        self.values[name] = elementwise(JOIN[running.how], self.values[name], value) if name in self.values else value
+        self.counts[name] = self.counts.get(name, 0) + 1
+
+    def happen(self, dated_event: DatedEvent) -> bool:
+        """Carry out an event; True if the contract ends."""
+        event = dated_event.event
+        holds = event.condition is None or all(row_of(self.evaluate(event.condition)))
+        if holds and event.name:
+            self.result.met.add(event.name)
+        self.remember(formulas_of(event))
+        for action in event.then if holds else event.otherwise:
+            match action:
+                case Pay(amount=amount, leg=leg):
+                    (paid,) = row_of(self.evaluate(amount))
+                    paid *= self.market.discount(dated_event.due[action].time)
+                    self.result.legs[leg] = self.result.legs.get(leg, 0.0) + paid
+                case Assign(values=values):
+                    self.values.update([(name, self.evaluate(right)) for name, right in values])
+                case End():
+                    self.result.ended = dated_event.occasion.day.time
+                    return True
+        return False
+
+
+def formulas_of(event: Event) -> list[trees.Formula]:
+    """Every formula written in an event."""
+    found = [event.condition] if event.condition is not None else []
+    for action in (*event.then, *event.otherwise):
+        if isinstance(action, Pay):
+            found.append(action.amount)
+        elif isinstance(action, Assign):
+            found += [right for _, right in action.values]
+    return found
+
+
+class Reference:
+    """A dated contract under a market, on the grid of steps that a path was drawn for.
+
+    `grid` holds the ends of the steps in years; the first step begins at the valuation date. Every date on which a
+    level is read must be on the grid, and inside a continuous watch every node of rates, yields and vols as well.
+    `assets` are the numbers of those that move, in order; nothing later than the spot of the others may be read.
+    """
+
+    def __init__(self, dated: DatedContract, market: Market, grid: Sequence[float], assets: Sequence[int]):
+        self.dated, self.grid, self.assets = dated, tuple(grid), tuple(assets)
+        self.market = PlainMarket(market, dated.contract)
+        self.spots = tuple(asset.spot.value for asset in self.market.assets)
+        self.steps = [self.market.step(assets, start, end) for start, end in zip((0.0, *grid), grid, strict=False)]
+        self.moments: dict[float, list[Moment]] = {}
+        for moment in dated.moments:
+            self.moments.setdefault(self.snap(moment.day.time), []).append(moment)
+        self.order = {running.name: k for k, running in enumerate(dated.contract.payoff.running)}
+        self.sides = {watch.running.name: self.watched_sides(watch.running) for watch in dated.watches}
+        for watch in dated.watches:
+            inside = [t for t in self.market.nodes() if watch.start.time < t < watch.end.time]
+            missing = {*map(self.snap, inside), self.snap(watch.end.time)} - {*grid, 0.0}
+            assert not missing, f"{running_label(watch.running)} is watched over {sorted(missing)}, not on the grid"
+
+    def snap(self, time: float) -> float:
+        """The grid time that a time is, but for rounding."""
+        return next((known for known in (0.0, *self.grid) if abs(known - time) < SAME_TIME), time)
+
+    def watched_sides(self, running: Running) -> set[tuple[int, str]]:
+        """Which extremes of which assets a continuous watch needs, found by trying levels in its formula.
+
+        An extreme of a number needs the assets that the number depends on. A flag is needed from the side on which,
+        one asset moved alone from one far end to the other, it becomes what it waits for.
+        """
+        walk, count, found = Walk(self.dated, self.market), len(self.spots), set()
+
+        def value(levels: list[float]) -> Value:
+            walk.look(None, running, plain(levels))
+            return walk.evaluate(running.formula)
+
+        for asset in range(count):
+            for side, calm, far in (("low", HUGE, TINY), ("high", TINY, HUGE)):
+                before = value([calm] * count)
+                after = value([far if k == asset else calm for k in range(count)])
+                if running.how in ("lowest", "highest"):
+                    wanted = before != after and side == {"lowest": "low", "highest": "high"}[running.how]
+                else:
+                    wanted = before != after and after == (running.how == "ever")
+                if wanted:
+                    found.add((asset, side))
+        return found
+
+    def path(self, normal: Callable[[int, int], float], uniform: Callable[[int, int, str], float]) -> Result:
+        """What the contract pays on one path.
+
+        `normal(step, k)` is the normal of the k-th moving asset in a step, `uniform(step, asset, side)` the uniform of a watched extreme
+        inside it, side 'low' or 'high'.
+        """
+        walk, levels = Walk(self.dated, self.market), self.spots
+        starts = {self.snap(watch.start.time) for watch in self.dated.watches}
+        for time in sorted({0.0, *self.grid, *self.moments, *starts}):
+            low = high = None
+            if time in self.grid:
+                step = self.grid.index(time)
+                levels, low, high = self.advance(step, levels, normal, uniform)
+            known = time <= 0.0 or time in self.grid
+            if self.live(walk, time, plain(levels) if known else None, low, high):
+                break
+        return walk.result
+
+    def advance(self, step: int, levels: tuple[float, ...], normal: Callable[[int, int], float],
+                uniform: Callable[[int, int, str], float]) -> tuple[tuple[float, ...], Value, Value]:
+        """Levels at the end of a step, and the lowest and highest inside it where they are watched."""
+        numbers, before = self.steps[step], [math.log(level) for level in levels]
+        after, variances = list(before), dict(zip(self.assets, numbers.variances, strict=True))
+        for asset, drift, row in zip(self.assets, numbers.drifts, numbers.factor, strict=True):
+            after[asset] += drift + sum(weight * normal(step, k) for k, weight in enumerate(row) if weight)
+        low, high = list(after), list(after)
+        for asset, side in sorted(self.watched_in(step)):
+            ends = (before[asset], after[asset], variances[asset], uniform(step, asset, side))
+            if side == "low":
+                low[asset] = bridge_low(*ends)
+            else:
+                high[asset] = bridge_high(*ends)
+        return tuple(map(math.exp, after)), plain([*map(math.exp, low)]), plain([*map(math.exp, high)])
+
+    def watched_in(self, step: int) -> set[tuple[int, str]]:
+        """The assets and sides that are watched inside a step."""
+        start, end = (0.0, *self.grid)[step], self.grid[step]
+        return {side for watch in self.dated.watches
+                if self.snap(watch.start.time) <= start and end <= self.snap(watch.end.time)
+                for side in self.sides[watch.running.name] if side[0] in self.assets}
+
+    def live(self, walk: Walk, time: float, levels: Value | None, low: Value | None, high: Value | None) -> bool:
+        """All that happens at one time: running values in file order, then events; True if the contract ends."""
+        moments = self.moments.get(time, [])
+        todo: list[Watch | Update] = [update for moment in moments for update in moment.updates]
+        todo += [watch for watch in self.dated.watches
+                 if self.snap(watch.start.time) <= time <= self.snap(watch.end.time)]
+        for item in sorted(todo, key=lambda one: self.order[one.running.name]):
+            if isinstance(item, Update):
+                walk.look(item.occasion, item.running, levels)
+                walk.observe(item.running)
+                walk.remember([item.running.formula])
+                continue
+            seen = [levels] if self.snap(item.start.time) == time else [low, high] if low is not None else []
+            for extreme in seen:
+                walk.look(None, item.running, extreme)
+                walk.observe(item.running)
+        for dated_event in (event for moment in moments for event in moment.events):
+            walk.look(dated_event.occasion, dated_event.event, levels)
+            if walk.happen(dated_event):
+                return True
+        return False
+
+
+def running_label(running: Running) -> str:
+    return f"'{running.name}' at {running.place}"
