@@ -1,7 +1,7 @@
 """The kernel: interprets the code on one block of lanes, each instruction one loop that LLVM vectorises.
 
-Rows of one instruction are never the same (`prepare.py` sees to it), else the alias check would send the loop down
-its scalar branch. A form that is missing here would leave a row as it was: a test runs every one.
+No instruction writes a row that it reads (`prepare.py` sees to it), else the alias check would send the loop
+down its scalar branch. A form that is missing here would leave a row as it was: a test runs every one.
 """
 
 from __future__ import annotations
@@ -15,7 +15,7 @@ from mcx.machine.special import exp_row, log_row
 
 @jit
 def forward(registers, code, scalars, lanes):
-    """Run the code on one block: registers (rows, at least lanes) float64, code and scalars as in `KernelCode`."""
+    """Run the code (see `KernelCode`) on one block: registers (rows, at least lanes) float64."""
     for line in range(code.shape[0]):
         form = code[line, 0]
         y = registers[code[line, 1]]
@@ -183,7 +183,7 @@ def _model(form, y, registers, scalars, a, b, c, d, lanes):
         x, m, s, z = registers[a], scalars[b], scalars[c], registers[d]
         for i in range(lanes):
             y[i] = x[i] + m + s * z[i]
-    elif form == Form.BRIDGE_LOW_RRSR:  # inversion of the law of a Brownian bridge's extreme; see tape/rules.py
+    elif form == Form.BRIDGE_LOW_RRSR:  # the law of a bridge's extreme, inverted: see tape/rules.py
         x0, x1, variance, log = registers[a], registers[b], scalars[c], registers[d]
         for i in range(lanes):
             move = x1[i] - x0[i]
