@@ -187,20 +187,22 @@ class Walk:
         """Formulas now speak of these levels and of this occasion of this running value or event."""
         self.occasion, self.owner, self.spot = occasion, owner.place, levels
 
-    def remember(self, formulas: Sequence[trees.Formula]) -> None:
-        """Keep what `previous` will ask for on the next date of this running value or event."""
-        queue, fresh = list(formulas), {}
+    def kept_for_next(self, formulas: Sequence[trees.Formula]) -> dict[tuple[Place, int], Value]:
+        """What `previous` in these formulas will ask for on the next date of this running value or event."""
+        queue, kept = list(formulas), {}
         while queue:
             for node in trees.walk(queue.pop()):
                 if isinstance(node, trees.Name) and node.name in self.lets:
                     queue.append(self.lets[node.name])
                 elif isinstance(node, trees.Previous):
-                    fresh[self.owner, id(node)] = self.evaluate(node.operand)
-        self.remembered |= fresh
+                    kept[self.owner, id(node)] = self.evaluate(node.operand)
+        return kept
 
     def observe(self, running: Running) -> None:
         """One more observation enters a running value."""
         value = self.evaluate(running.formula)
+        if self.occasion is not None:
+            self.remembered |= self.kept_for_next([running.formula])
         if running.how in ("total", "average", "product"):
             value = elementwise(float, value)
         name = running.name
@@ -213,8 +215,7 @@ class Walk:
         holds = event.condition is None or all(row_of(self.evaluate(event.condition)))
         if holds and event.name:
             self.result.met.add((event.name, day))
-        self.remember(formulas_of(event))
-        due = []
+        kept, due = self.kept_for_next(formulas_of(event)), []
         for action in event.then if holds else event.otherwise:
             match action:
                 case Pay(amount=amount, leg=leg, part=part):
@@ -226,6 +227,7 @@ class Walk:
                 case End():
                     self.result.ended, self.result.life = day, max(due, default=math.nan)
                     return True
+        self.remembered |= kept
         return False
 
 
@@ -344,7 +346,6 @@ class Reference:
             if isinstance(item, Update):
                 walk.look(item.occasion, item.running, levels)
                 walk.observe(item.running)
-                walk.remember([item.running.formula])
                 continue
             seen = [levels] if self.snap(item.start.time) == time else [low, high] if low is not None else []
             for extreme in seen:

@@ -11,7 +11,9 @@ from pathlib import Path
 import numpy as np
 import pytest
 from drawn import reference_results
-from helpers import Ready, ready_of
+from helpers import Ready, prepare, ready_of
+from hypothesis import given, settings
+from random_payoffs import contracts
 from reference import Result
 
 import mcx
@@ -20,6 +22,7 @@ from mcx.tape.program import Output
 
 PAYOFFS = Path(__file__).resolve().parent.parent / "payoffs"
 EXAMPLES = sorted((PAYOFFS / "examples").glob("*.yaml"))
+CORNERS = sorted((Path(__file__).parent / "corners").glob("*.yaml"))
 SEED, PATHS = 0x71374491B5C0FBCF, 64
 
 
@@ -65,20 +68,41 @@ def plainly(output: Output, result: Result) -> float | None:
     return None
 
 
-@pytest.mark.parametrize("example", EXAMPLES, ids=lambda path: path.stem)
-def test_second_implementation_agrees(example: Path):
+def hold_against_reference(contract: Ready, paths: int) -> None:
     """On the same draws the plain walk and the machine agree path by path: legs, conditions, ends, life, price."""
+    values = contract.by_path(paths, SEED)
+    results = reference_results(contract, range(paths), SEED)
+    outputs = contract.unrolled.tape.outputs
+    for output in outputs:
+        plain = [plainly(output, result) for result in results]
+        if None not in plain:
+            np.testing.assert_allclose(values[output.name], plain, rtol=1e-10, atol=1e-12,
+                                       err_msg=f"{contract.dated.contract.title}: {output.name}")
+    legs = {output.subject for output in outputs if output.kind == "leg"}
+    assert {payment.leg for result in results for payment in result.payments} <= legs
+
+
+@pytest.mark.parametrize("example", [*EXAMPLES, *CORNERS], ids=lambda path: path.stem)
+def test_second_implementation_agrees(example: Path):
+    """Every contract of every example, and of the files that visit the grammar's corners."""
     for contract in ready(example):
-        values = contract.by_path(PATHS, SEED)
-        results = reference_results(contract, range(PATHS), SEED)
-        outputs = contract.unrolled.tape.outputs
-        for output in outputs:
-            plain = [plainly(output, result) for result in results]
-            if None not in plain:
-                np.testing.assert_allclose(values[output.name], plain, rtol=1e-10, atol=1e-13,
-                                           err_msg=f"{contract.dated.contract.title}: {output.name}")
-        legs = {output.subject for output in outputs if output.kind == "leg"}
-        assert {payment.leg for result in results for payment in result.payments} <= legs
+        hold_against_reference(contract, PATHS)
+
+
+@settings(max_examples=3 * settings.default.max_examples)
+@given(contracts())
+def test_second_implementation_agrees_on_payoffs_made_up(text: str):
+    """Payoffs of random formulas, running values and events mean the same to both."""
+    hold_against_reference(prepare(text), 16)
+
+
+def test_levels_exactly_at_a_number():
+    """At the start the level is the spot to the last digit: `<=` and `<` differ there, and a barrier at the spot is
+    touched."""
+    (exactly,) = ready(Path(__file__).parent / "corners" / "edges.yaml")
+    found = {name: value.mean for name, value in exactly.estimates(64, SEED).items() if name.startswith("leg: ")}
+    assert found == {"leg: at or below": 1, "leg: below": 0, "leg: at or above": 1, "leg: above": 0, "leg: equal": 1,
+                     "leg: other": 0, "leg: touched": 1}
 
 
 @pytest.mark.parametrize("example", EXAMPLES, ids=lambda path: path.stem)
