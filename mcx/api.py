@@ -12,10 +12,11 @@ from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from mcx.checked.load import Request, checked_request, request
+from mcx.checked.load import Request, checked_request
 from mcx.dates.dated_contract import DatedContract
 from mcx.dates.dating import date_contract
 from mcx.faults import Fault, InputError, Place, Refusal, RequestError, did_you_mean
+from mcx.text.documents import read_documents
 from mcx.text.located import Document
 
 if TYPE_CHECKING:
@@ -153,12 +154,13 @@ def _dated(files: Sequence[File], *, with_market: bool) -> tuple[Request, list[D
     """The documents of the files and their contracts with every date, all sound."""
     if not files:
         raise RequestError("no files are given")
-    made, faults = request(files)
+    documents, unread = read_documents(files)
+    made, faults = checked_request(documents, unread)
     kinds = {document.kind for document in made.documents}
     names = ", ".join(map(str, files))
     missing = [("contract", CONTRACT_BEGINS), ("market", MARKET_BEGINS)][: 1 + with_market]
     for kind, begins in missing:
-        if kind not in kinds and not any(fault.place.line == 1 == fault.place.column for fault in faults):
+        if kind not in kinds and not unread:  # else it may stand in what could not be read
             faults.append(Fault(Place(str(files[0]), 1, 1), f"no {kind} in {names}; expected {begins}"))
     return made, _all_dated(made, faults)
 
