@@ -140,11 +140,13 @@ def replay(
 
     threads = _threads(threads)
     stored = read_record(file)
-    made, faults = checked_request(documents_of(stored))
+    made, faults = checked_request(*documents_of(stored))
     dated = _all_dated(made, faults)
     runs = stored["request"]
+    if made.market is None or len(runs) != len(dated):
+        raise RequestError(f"{file}: the record has {len(runs)} requests for the {len(dated)} contracts in its inputs")
     asked = [precision(each["paths"], None, None) for each in runs]
-    table = _price(made, dated, asked, [each["seed"] for each in runs], threads, progress, notice)
+    table = _price(made, dated, asked, [_seed(each["seed"]) for each in runs], threads, progress, notice)
     if table.interrupted:
         raise KeyboardInterrupt
     return compare(stored, [each.to_dict() for each in table.prices], environment())
@@ -187,7 +189,7 @@ def _price(
     progress: Progress | None,
     notice: Callable[[str], None] | None,
 ) -> PriceTable:
-    """Every contract valued; after an interruption those so far."""
+    """Every contract valued; after an interruption those so far. Raises KeyboardInterrupt if that is none."""
     from mcx.estimators.price import value
     from mcx.machine.run import NonFinitePath
     from mcx.report.results import PriceTable
@@ -202,10 +204,14 @@ def _price(
             raise Refusal(f"'{ready.dated.contract.title}': '{output}' is not a finite number on path {trouble.path} "
                           f"(seed {seed}, stream {trouble.stream}); a formula divides by 0, overflows or leaves the "
                           f"domain of log, sqrt or a power") from None
+        except KeyboardInterrupt:
+            if not results:
+                raise
+            break
         results.append(price_result(ready, made.market, valuation))
         if valuation.interrupted:
             break
-    return PriceTable(tuple(results))
+    return PriceTable(tuple(results), tuple(each.contract.title for each in dated[len(results):]))
 
 
 def _ready(made: Request, dated: Sequence[DatedContract]) -> list[Ready]:

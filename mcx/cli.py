@@ -122,7 +122,6 @@ def main(arguments: list[str] | None = None) -> None:
             stream.reconfigure(errors="replace")  # a terminal without '±' is no reason to fail
     try:
         cli.main(arguments, prog_name="mcx", standalone_mode=False)
-        sys.stdout.flush()
     except (InputError, RequestError, Refusal) as trouble:
         _complain(str(trouble))
         sys.exit(WRONG)
@@ -135,8 +134,17 @@ def main(arguments: list[str] | None = None) -> None:
         _complain("interrupted before there was an estimate")
         sys.exit(INTERRUPTED)
     except BrokenPipeError:  # the reader has read what it wanted
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        _stop_writing()
         sys.exit(0)
+    except OSError as trouble:  # every file that is read has its own sentence by now
+        _stop_writing()
+        _complain(f"the answer cannot be written: {trouble.strerror or trouble}")
+        sys.exit(WRONG)
+
+
+def _stop_writing() -> None:
+    """What is still waiting for standard output goes nowhere, so that the end of the process cannot fail on it."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
 def _complain(text: str) -> None:

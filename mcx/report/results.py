@@ -155,13 +155,15 @@ class PriceResult(Result):
 
 @dataclass(frozen=True, slots=True)
 class PriceTable(Result):
-    """Several contracts on one market, in the order of the files."""
+    """Several contracts on one market, in the order of the files; after an interruption `not_valued` are the titles
+    of those that were not reached."""
 
     prices: tuple[PriceResult, ...]
+    not_valued: tuple[str, ...] = ()
 
     @property
     def interrupted(self) -> bool:
-        return any(price.interrupted for price in self.prices)
+        return bool(self.not_valued) or any(price.interrupted for price in self.prices)
 
 
 @dataclass(frozen=True, slots=True)

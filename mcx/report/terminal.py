@@ -28,6 +28,7 @@ class Page:
         """Writes the page; nothing can be added after that."""
         self._capture.__exit__(None, None, None)
         sys.stdout.write(re.sub(" +$", "", self._capture.get(), flags=re.MULTILINE))
+        sys.stdout.flush()  # whatever is wrong with the reader shows now, not when the process ends
 
     def heading(self, text: str) -> None:
         self.console.print()
@@ -47,7 +48,7 @@ class Page:
     def named(self, pairs: Iterable[tuple[str, str]]) -> None:
         """Names with what is said of them."""
         grid = Table.grid(padding=(0, 2))
-        grid.add_column(max_width=24)
+        grid.add_column(max_width=24, overflow="fold")
         grid.add_column()
         for name, text in pairs:
             grid.add_row(Text(name), Text(text))
