@@ -83,6 +83,13 @@ class Word:
 TermValue: TypeAlias = DayRef | DayRule | DayList | Stretch | Figures | Word
 
 
+def place_of(value: TermValue, position: int) -> Place:
+    """Where one of a term's dates is written: in its place of a list, at an end of a stretch, else the whole value."""
+    if isinstance(value, Stretch):
+        return (value.start, value.end)[position].place
+    return value.days[position].place if isinstance(value, DayList) and len(value.days) > 1 else value.place
+
+
 @dataclass(frozen=True, slots=True)
 class BusinessDays:
     """Which days are good (`holidays`: a financial calendar's name, or 'none' for weekends only) and how others roll

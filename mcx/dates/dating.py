@@ -11,7 +11,7 @@ import datetime
 import math
 from dataclasses import replace
 
-from mcx.checked.contract import Contract, DayList, DayRef, Figures, Stretch
+from mcx.checked.contract import Contract, DayRef, Figures, Stretch, place_of
 from mcx.checked.payoff import At, Continuous, Event, Pay, Running
 from mcx.checked.term_values import DATED_TYPES, NUMERIC
 from mcx.dates.business_days import GoodDays, NotCovered, good_days
@@ -129,14 +129,8 @@ class _Dating:
     def _refuse_dates_before_start(self) -> None:
         for name, days in self.schedules.items():
             if days[0].time < self.start.time:
-                self._fault(self._place(name, 0), f"{days[0]} lies before the contract's start {self.start}")
-
-    def _place(self, name: str, position: int) -> Place:
-        """Where a date of a term is written: in its place of a list, else the term's value."""
-        value = self.contract.terms[name]
-        if isinstance(value, Stretch):
-            return (value.start, value.end)[position].place
-        return value.days[position].place if isinstance(value, DayList) and len(value.days) > 1 else value.place
+                self._fault(place_of(self.contract.terms[name], 0),
+                            f"{days[0]} lies before the contract's start {self.start}")
 
     def _is_past(self, day: Day) -> bool:
         """Whether a day is before the valuation date; one before the start is at fault already."""
@@ -148,7 +142,7 @@ class _Dating:
             days = [self.schedules[name][k] for k in sorted(positions)]
             few = f"{days[0]} lies" if len(days) == 1 else f"{len(days)} dates, {days[0]} to {days[-1]}, lie"
             what = "the start of the watch " if isinstance(self.contract.terms[name], Stretch) else ""
-            self._fault(self._place(name, min(positions)),
+            self._fault(place_of(self.contract.terms[name], min(positions)),
                         f"{what}{few} before the valuation date {self.valuation}; a seasoned trade needs fixings, "
                         "which a later version reads")
 
@@ -254,7 +248,8 @@ class _Dating:
             return day
         due = self.schedules[pay.due][position]
         if due.time < day.time:
-            self._fault(self._place(pay.due, position), f"the payment of what is observed on {day} falls due before, on {due}")
+            self._fault(place_of(self.contract.terms[pay.due], position),
+                        f"the payment of what is observed on {day} falls due before, on {due}")
         return due
 
     def _after_lag(self, day: Day) -> Day:
