@@ -39,8 +39,17 @@ def sampling(command: Callable) -> Callable:
     return command
 
 
+def _show_version(context: click.Context, _: click.Parameter, wanted: bool) -> None:
+    if wanted and not context.resilient_parsing:
+        from mcx import __version__
+
+        click.echo(__version__)
+        context.exit()
+
+
 @click.group(context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
-@click.version_option(package_name="mcx", message="%(version)s")
+@click.option("--version", is_flag=True, is_eager=True, expose_value=False, callback=_show_version,
+              help="Show the version and exit.")
 def cli() -> None:
     """Independent values, with their errors, for structured notes and exotic options declared in YAML.
 
