@@ -39,6 +39,30 @@ def sampling(command: Callable) -> Callable:
     return command
 
 
+class ReaderGone(Exception):
+    """Whoever read standard output has gone away."""
+
+
+class Commands(click.Group):
+    """Commands whose reader may go away, which is nobody's fault: click would answer 1, and that means 'no' here."""
+
+    def parse_args(self, ctx: click.Context, args: list[str]) -> list[str]:
+        with _reader():
+            return super().parse_args(ctx, args)
+
+    def invoke(self, ctx: click.Context) -> object:
+        with _reader():
+            return super().invoke(ctx)
+
+
+@contextmanager
+def _reader() -> Iterator[None]:
+    try:
+        yield
+    except BrokenPipeError:
+        raise ReaderGone from None
+
+
 def _show_version(context: click.Context, _: click.Parameter, wanted: bool) -> None:
     if wanted and not context.resilient_parsing:
         from mcx import __version__
@@ -47,7 +71,7 @@ def _show_version(context: click.Context, _: click.Parameter, wanted: bool) -> N
         context.exit()
 
 
-@click.group(context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
+@click.group(cls=Commands, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
 @click.option("--version", is_flag=True, is_eager=True, expose_value=False, callback=_show_version,
               help="Show the version and exit.")
 def cli() -> None:
@@ -142,7 +166,7 @@ def main(arguments: list[str] | None = None) -> None:
     except (KeyboardInterrupt, click.Abort):
         _complain("interrupted before there was an estimate")
         sys.exit(INTERRUPTED)
-    except BrokenPipeError:  # the reader has read what it wanted
+    except ReaderGone:  # it has read what it wanted
         _stop_writing()
         sys.exit(0)
     except OSError as trouble:  # every file that is read has its own sentence by now
