@@ -144,7 +144,8 @@ class _Walk:
         for running in self.running.values():
             if running.start is not None:
                 self._look(running, None)
-                self._learn(running.name, self._read(running.start) if running.how in ("set", "total") else None)
+                value = self._read(running.start)
+                self._learn(running.name, value if running.how in ("set", "total") else None)
             elif running.how == "total":
                 self.known[running.name] = 0.0
         for watch in self.dated.watches:

@@ -577,6 +577,13 @@ def test_optional_terms_that_do_not_count_are_refused():
     assert dated(terms=OPTIONAL, events=CAPPED, more="  capped: true\n  cap: 120%\n")[1] == []
 
 
+def test_a_start_reads_its_terms():
+    """A term that only the start of a running value reads does count."""
+    parts = "running:\n  top: {highest: spot, at: observations, start: cap}\n"
+    assert dated(terms=OPTIONAL.splitlines()[0] + "\n", parts=parts,
+                 events="  - at: observations.last\n    pay: top\n", more="  cap: 120%\n")[1] == []
+
+
 def test_events_that_never_happen_are_said():
     """An event whose `from` lies after its last date never happens, which is an assumption worth printing."""
     found, faults = dated(terms="  first_call: {type: date}\n", more="  first_call: 2028-01-03\n",
