@@ -42,7 +42,8 @@ def kernels_there(tmp_path_factory: pytest.TempPathFactory) -> None:
     assert mcx("price", NOTE, "--paths", 64, cwd=tmp_path_factory.mktemp("warm")).returncode == 0
 
 
-@pytest.mark.parametrize("arguments", [["--help"], ["price", "--help"], ["payoffs", "european"], ["price", "none.yaml"]])
+@pytest.mark.parametrize("arguments", [
+    ["--help"], ["price", "--help"], ["payoffs", "european"], ["price", "none.yaml"]])
 def test_quick_answers_load_nothing_heavy(arguments: list[str], tmp_path: Path):
     """Help, a definition and a fault come without numpy or numba."""
     code = f"""import sys
@@ -122,7 +123,8 @@ def test_a_terminal_sees_progress(tmp_path: Path):
 
 def test_ctrl_c_gives_the_estimate_so_far(tmp_path: Path):
     """Code 130 and a price of the paths done; that price is the one of a run of so many paths."""
-    code, out, shown = on_a_terminal(["price", NOTE, "--paths", 10**12, "--json"], tmp_path, b"of 1,000,000,000,000 paths")
+    command = ["price", NOTE, "--paths", 10**12, "--json"]
+    code, out, shown = on_a_terminal(command, tmp_path, press_at=b"of 1,000,000,000,000 paths")
     found = json.loads(out)
     assert code == 130 and "Traceback" not in shown
     assert found["interrupted"] and 2 <= found["paths"] < 10**12
