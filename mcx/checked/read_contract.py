@@ -16,6 +16,7 @@ from mcx.checked.contract import BusinessDays, Contract, DayRef, DayRule, Period
 from mcx.checked.formula import Formula, Name, walk
 from mcx.checked.payoff import Assign, Pay, Payoff
 from mcx.checked.read_payoff import read_payoff
+from mcx.checked.read_terms import read_terms
 from mcx.checked.reading import (
     check_keys,
     items_of,
@@ -79,6 +80,8 @@ def read_contract(
     textbook = _is_textbook(reader.written)
     _check_times(reader.written, textbook, values, faults)
     _check_keys(body, _is_dated(body, textbook, reader), payoff, frame)
+    if not payoff.events:
+        return None, faults + frame
     return Contract(
         title=title, currency=currency or "", assets=assets, payoff=_begun(payoff, values), terms=values,
         place=body.get("contract").place, notional=size.get("notional"), units=size.get("units"), start=start,
@@ -119,7 +122,7 @@ def _size(body: Mapping, faults: list[Fault]) -> dict[str, float]:
 def _payoff(
     body: Mapping, definitions: MappingOf[str, Document], assets: tuple[str, ...], faults: list[Fault]
 ) -> Payoff | None:
-    """The definition that the contract names, checked for its assets."""
+    """The definition that the contract names, checked for its assets; without events where it is at fault."""
     name = read(body, "payoff", word, faults)
     if name is None:
         return None
@@ -129,7 +132,9 @@ def _payoff(
         return None
     payoff, wrong = read_payoff(definitions[name], assets=len(assets) or None, asset_names=assets)
     faults += wrong
-    if payoff and assets:
+    if payoff is None:
+        return _terms_alone(definitions[name])
+    if assets:
         fewest, most = payoff.assets
         if len(assets) < fewest or (most is not None and len(assets) > most):
             wanted = f"{fewest} or more" if most is None else f"{fewest}"
@@ -137,6 +142,14 @@ def _payoff(
             faults.append(Fault(body.get("assets").place, text))
             return None
     return payoff
+
+
+def _terms_alone(definition: Document) -> Payoff | None:
+    """The terms of a definition that is at fault elsewhere, so that their values can be read all the same."""
+    said: list[Fault] = []
+    terms = read_terms(definition.body.get("terms"), said)
+    name = definition.body.get("payoff")
+    return None if said else Payoff(name.text, "", terms, (), (), (), name.place)
 
 
 def _start(node: Node) -> DayRef | Fault:

@@ -333,8 +333,8 @@ class _Walk:
 
     def _divided_by_nothing(self, formula: Binary) -> None:
         """A division by 0 on every path: the fault of the dates, which let nothing be counted."""
-        what = f"'{formula.right.name}'" if isinstance(formula.right, Name) else "what is divided by"
-        text = f"{what} is 0{self._on}, where it is divided by ({formula.right.place})"
+        by = f"'{formula.right.name}', which is 0 then" if isinstance(formula.right, Name) else "what is 0 then"
+        text = f"{self._on.strip() or 'at the start'} a formula divides by {by} ({formula.right.place})"
         stated = None
         if self.occasion and self.occasion.schedule:
             stated = place_of(self.contract.terms[self.occasion.schedule], self.occasion.nth - 1)

@@ -346,3 +346,19 @@ def test_faults_of_the_definition_are_told_too():
     """A contract on a definition at fault is refused with the definition's faults at their places."""
     _, faults = parsed(WHOLE, DEFINITION.replace("pay: period", "pay: perriod"))
     assert faults == ["d.yaml:22:14: there is no 'perriod' here; did you mean 'period'?"]
+
+
+def test_terms_are_read_beside_faults_of_the_definition():
+    """A definition that is at fault in its events still says which terms there are, and of which type."""
+    text = WHOLE.replace("[100%, 95%, 90%]", "70").replace("side: call", "syde: call")
+    contract, faults = parsed(text, DEFINITION.replace("pay: period", "pay: perriod"))
+    assert contract is None
+    assert [fault.split(": ")[0] for fault in faults] == ["c.yaml:14:12", "c.yaml:18:3", "d.yaml:22:14"]
+    _, faults = parsed(text, DEFINITION.replace("{type: flag, default: false}", "{type: flg}"))
+    assert [fault.split(": ")[0] for fault in faults] == ["d.yaml:12:22"]  # the terms themselves are at fault
+
+
+def test_what_stands_there_already_is_not_offered():
+    """For a term that is not known, only those that are still blank are offered."""
+    assert faults_of("  watched: {", "  barrier_watched: {") == [
+        "c.yaml:17:3: 'barrier_watched' is not a key of the terms of 'sampler'; did you mean 'watched'?"]

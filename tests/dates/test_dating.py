@@ -534,8 +534,8 @@ def test_a_period_without_any_day():
     """What would divide by 0 whatever happens is refused, at each of the dates that let nothing be counted."""
     days = "  days: [2027-01-15, 2027-03-01, 2027-03-02]\n"
     _, faults = dated(terms=DAYS, parts=COUNTED, events=COUNTS, more=days)
-    assert faults == ["'seen' is 0 on 2027-08-16, where it is divided by (n.yaml:11:14)",
-                      "'seen' is 0 on 2027-11-16, where it is divided by (n.yaml:11:14)"]
+    assert faults == ["on 2027-08-16 a formula divides by 'seen', which is 0 then (n.yaml:11:14)",
+                      "on 2027-11-16 a formula divides by 'seen', which is 0 then (n.yaml:11:14)"]
     assert dated(terms=DAYS, parts=COUNTED, events=COUNTS, more=days.replace("]", ", 2027-08-16, 2027-11-16]"))[1] == []
     listed = CONTRACT.replace("{from: 2027-02-16, until: 2027-11-16, every: 3 months}", "[2027-02-16, 2027-05-17]")
     text = f"{HEAD}{DAYS}{COUNTED}events:\n{COUNTS}---\n{listed}  days: [2027-02-16]\n"
@@ -554,7 +554,7 @@ def test_a_count_that_hangs_on_the_path_is_not_judged():
     assert dated(terms=DAYS, parts=COUNTED, events=guarded, more=days)[1] == []
     total = "running:\n  seen: {total: 1 if nth > 2 else 0, at: observations}\n"
     divides = "  - at: observations.but_first\n    pay: 1 / seen\n"
-    assert dated(parts=total, events=divides)[1] == ["'seen' is 0 on 2027-05-17, where it is divided by (n.yaml:8:14)"]
+    assert dated(parts=total, events=divides)[1] == ["on 2027-05-17 a formula divides by 'seen', which is 0 then (n.yaml:8:14)"]
 
 
 OPTIONAL = "  cap: {type: percent, optional: true}\n  capped: {type: flag}\n"
