@@ -5,6 +5,7 @@
 
 from __future__ import annotations
 
+import gc
 import json
 import os
 import sys
@@ -150,6 +151,7 @@ def main(arguments: list[str] | None = None) -> None:
     """The door: runs a command and ends the process with its exit code."""
     from mcx.faults import InputError, Refusal, RequestError
 
+    gc.set_threshold(1_000_000)  # what imports make stays: looking for garbage in it takes a tenth of a start
     for stream in (sys.stdout, sys.stderr):
         if hasattr(stream, "reconfigure"):
             stream.reconfigure(errors="replace")  # a terminal without '±' is no reason to fail
