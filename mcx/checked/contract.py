@@ -106,7 +106,7 @@ class Contract:
 
     A contract at fault is handed on as far as it could be read, so that dates and market can be checked in the same
     round: `at_fault` are the terms without a value that should have one, `framed` is whether assets, start, day count,
-    settlement and calendar are all sound.
+    settlement and calendar are all sound. Where its definition is at fault, `payoff` holds no more than the terms.
     """
 
     title: str

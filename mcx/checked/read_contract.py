@@ -59,8 +59,8 @@ DAY_COUNTS: MappingProxyType[str, str] = MappingProxyType({
 def read_contract(
     document: Document, definitions: MappingOf[str, Document]
 ) -> tuple[Contract | None, list[Fault]]:
-    """The contract that a document says as far as it could be read (see `Contract`), None where its payoff could
-    not; and what is wrong. `definitions` gives payoffs by name."""
+    """The contract that a document says as far as it could be read (see `Contract`), None where it is not known which
+    terms its payoff has; and what is wrong. `definitions` gives payoffs by name."""
     body, faults = document.body, []
     size = _size(body, faults)
     title, currency = text_of(body, "contract", faults), read(body, "currency", currency_code, faults)
@@ -80,8 +80,6 @@ def read_contract(
     textbook = _is_textbook(reader.written)
     _check_times(reader.written, textbook, values, faults)
     _check_keys(body, _is_dated(body, textbook, reader), payoff, frame)
-    if not payoff.events:
-        return None, faults + frame
     return Contract(
         title=title, currency=currency or "", assets=assets, payoff=_begun(payoff, values), terms=values,
         place=body.get("contract").place, notional=size.get("notional"), units=size.get("units"), start=start,

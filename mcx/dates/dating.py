@@ -45,7 +45,7 @@ def date_contract(
     start = Day(0.0) if contract.textbook else terms.day(contract.start.date)
     dated, faults = _Dating(contract, valuation, schedules, unread, start, terms, good).dated()
     faults += terms.faults + _wrong_lengths(contract, schedules)
-    return (None if faults or contract.at_fault or not contract.framed else dated), sorted(set(faults))
+    return (None if faults or contract.at_fault else dated), sorted(set(faults))
 
 
 def _wrong_lengths(contract: Contract, schedules: dict[str, tuple[Day, ...]]) -> list[Fault]:
@@ -119,7 +119,7 @@ class _Dating:
         """Whether all that decides which formulas are read is known: every term but numbers that must be stated."""
         at_fault = [term for term in self.payoff.terms if term.name in self.contract.at_fault | self.unread]
         numbers = all(term.type in NUMERIC and not term.optional for term in at_fault)
-        return self.contract.framed and not self.unwatched and numbers
+        return self.contract.framed and bool(self.payoff.events) and not self.unwatched and numbers
 
     def _fault(self, place: Place, text: str) -> None:
         fault = Fault(place, text)

@@ -352,7 +352,7 @@ def test_terms_are_read_beside_faults_of_the_definition():
     """A definition that is at fault in its events still says which terms there are, and of which type."""
     text = WHOLE.replace("[100%, 95%, 90%]", "70").replace("side: call", "syde: call")
     contract, faults = parsed(text, DEFINITION.replace("pay: period", "pay: perriod"))
-    assert contract is None
+    assert contract.payoff.events == ()
     assert [fault.split(": ")[0] for fault in faults] == ["c.yaml:14:12", "c.yaml:18:3", "d.yaml:22:14"]
     _, faults = parsed(text, DEFINITION.replace("{type: flag, default: false}", "{type: flg}"))
     assert [fault.split(": ")[0] for fault in faults] == ["d.yaml:12:22"]  # the terms themselves are at fault
