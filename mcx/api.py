@@ -176,8 +176,18 @@ def _all_dated(made: Request, faults: Iterable[Fault]) -> list[DatedContract]:
         if found is not None:
             dated.append(found)
     if faults:
-        raise InputError(faults)
+        raise InputError([*faults, *_watches_refused(dated)])
     return dated
+
+
+def _watches_refused(dated: Iterable[DatedContract]) -> list[Fault]:
+    """The continuous watches that cannot be simulated, so that they are told beside the faults of the documents."""
+    watched = [each for each in dated if each.watches]
+    if not watched:
+        return []
+    from mcx.tape.unroll import unroll
+
+    return [fault for each in watched for fault in unroll(each, nodes=()).faults]
 
 
 def _price(

@@ -197,6 +197,16 @@ def test_slips_that_only_dates_and_markets_show_come_at_once_too(tmp_path: Path)
     assert [line.split(": ")[0] for line in told(tmp_path, text)] == ["32:14", "33:12", "42:57", "44:14"]
 
 
+def test_watches_that_are_refused_beside_other_slips(tmp_path: Path):
+    """That a continuous watch of several assets is for a later version is said in the same round, too."""
+    watched = NOTE.replace("low: {lowest: performance, at: averaging}",
+                           "low: {lowest: performance, at: {continuous: [averaging.first, averaging.last]}}")
+    refusal = "13:3: several assets watched at once: this needs their joint law, which a later version brings"
+    assert told(tmp_path, watched) == [refusal]
+    old, new, fault = SLIPS["negative vol"]
+    assert told(tmp_path, watched.replace(old, new)) == [refusal, fault]
+
+
 def test_a_matrix_that_cannot_be(tmp_path: Path):
     """The message gives the nearest correlation matrix, which is then taken as it is."""
     text = NOTE.replace("quarry: 40%", "quarry: -90%")
