@@ -114,7 +114,7 @@ class Contract:
     assets: tuple[str, ...]
     payoff: Payoff
     terms: dict[str, TermValue]  # optional terms that were not stated are absent; defaults are filled in
-    place: Place
+    place: Place  # of the title
     notional: float | None = None
     units: float | None = None
     start: DayRef | None = None
@@ -126,6 +126,7 @@ class Contract:
     assumptions: tuple[str, ...] = ()
     at_fault: frozenset[str] = frozenset()
     framed: bool = True
+    terms_place: Place | None = None  # where a term that is missing would stand
 
     @property
     def size(self) -> float:

@@ -84,7 +84,7 @@ def read_contract(
         title=title, currency=currency or "", assets=assets, payoff=_begun(payoff, values), terms=values,
         place=body.get("contract").place, notional=size.get("notional"), units=size.get("units"), start=start,
         day_count=day_count or "", settlement=settlement, calendar=calendar, textbook=textbook,
-        text=document.text, at_fault=reader.at_fault,
+        text=document.text, terms_place=(terms or body).place, at_fault=reader.at_fault,
         framed=not frame and (textbook or (start and settlement and calendar) is not None),
     ), faults + frame
 

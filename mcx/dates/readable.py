@@ -329,7 +329,7 @@ class _Walk:
     def _not_stated(self, term: str, place: Place) -> None:
         text = (f"the term '{term}' is missing: it is optional in '{self.contract.payoff.name}', but with "
                 f"these terms it is read{self._on} ({place})")
-        self.owner.wrong.setdefault(term, Fault(self.contract.place, text))
+        self.owner.wrong.setdefault(term, Fault(self.contract.terms_place or self.contract.place, text))
 
     def _divided_by_nothing(self, formula: Binary) -> None:
         """A division by 0 on every path: the fault of the dates, which let nothing be counted."""
@@ -348,8 +348,10 @@ class _Walk:
                    if update.running.name == running.name and update.first]
         begins = f"begins on {starts[0]}" if starts else "has no date"
         text = f"'{running.name}' is read{self._on} ({place}), but {begins}"
-        stated = self.contract.terms.get(running.at.name) if isinstance(running.at, At) else None
-        self.owner.wrong.setdefault(running.name, Fault(stated.place if stated else running.place, text))
+        ends = (running.at,) if isinstance(running.at, At) else (running.at.start, running.at.end)
+        stated = [self.contract.terms[end.name].place for end in ends if end.name in self.contract.terms]
+        place = stated[0] if len(stated) == len(ends) else self.contract.terms_place
+        self.owner.wrong.setdefault(running.name, Fault(place or running.place, text))
 
 
 def _formulas(event: Event) -> list[Formula]:

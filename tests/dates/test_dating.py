@@ -554,7 +554,8 @@ def test_a_count_that_hangs_on_the_path_is_not_judged():
     assert dated(terms=DAYS, parts=COUNTED, events=guarded, more=days)[1] == []
     total = "running:\n  seen: {total: 1 if nth > 2 else 0, at: observations}\n"
     divides = "  - at: observations.but_first\n    pay: 1 / seen\n"
-    assert dated(parts=total, events=divides)[1] == ["on 2027-05-17 a formula divides by 'seen', which is 0 then (n.yaml:8:14)"]
+    assert dated(parts=total, events=divides)[1] == [
+        "on 2027-05-17 a formula divides by 'seen', which is 0 then (n.yaml:8:14)"]
 
 
 OPTIONAL = "  cap: {type: percent, optional: true}\n  capped: {type: flag}\n"
@@ -575,6 +576,19 @@ def test_optional_terms_that_do_not_count_are_refused():
     _, faults = dated(terms=OPTIONAL, events=CAPPED, more="  capped: false\n  cap: 120%\n")
     assert faults == ["'cap' is stated, but with these terms 'own' never reads it"]
     assert dated(terms=OPTIONAL, events=CAPPED, more="  capped: true\n  cap: 120%\n")[1] == []
+
+
+def test_what_is_read_but_not_stated():
+    """An optional term that counts, and a running value whose dates are not stated, are faults among the terms."""
+    text = f"{HEAD}{OPTIONAL}events:\n{CAPPED}---\n{CONTRACT}  capped: true\n"
+    assert places(text) == ["20:3"]
+    parts = "running:\n  low: {lowest: spot, at: fixings}\n"
+    terms, pays = "  fixings: {type: dates, optional: true}\n", "  - at: observations.last\n    pay: low\n"
+    assert dated(terms=terms, parts=parts, events=pays)[1] == [
+        "'low' is read on 2027-11-16 (n.yaml:9:10), but has no date"]
+    assert places(f"{HEAD}{terms}{parts}events:\n{pays}---\n{CONTRACT}") == ["21:3"]
+    found, faults = dated(terms=terms, parts=parts.replace("fixings}", "fixings, start: 90}"), events=pays)
+    assert faults == [] and all(not moment.updates for moment in found.moments)
 
 
 def test_a_start_reads_its_terms():
