@@ -165,7 +165,8 @@ NO_PAYOFF = ("payoff: rainbow_option", "payoff: rainbow_opton",
              "a.yaml:8:9: there is no payoff 'rainbow_opton'; did you mean 'rainbow_option'?")
 WRONG_VOL = ("vol: 18%", "vol: 18", "b.yaml:5:57: expected a percentage with its unit, found '18'; write '18%'")
 WRONG_DATE = ("market: 2026-12-01", "market: 01.12.2026",
-              "b.yaml:1:9: expected the valuation date, or '0y' for textbook contracts, found '01.12.2026'")
+              "b.yaml:1:9: expected the valuation date, or '0y' for textbook contracts, found '01.12.2026'; "
+              "write '2026-12-01'")
 
 
 @pytest.mark.parametrize("alone", [WRONG_TERM, NO_PAYOFF, WRONG_VOL, WRONG_DATE], ids=lambda slip: slip[1].strip())
