@@ -13,6 +13,7 @@ import mcx
 from mcx import InputError, Refusal, RequestError
 
 NOTE = EXAMPLES / "harbour_lantern.yaml"
+OWN = "payoff: own\nabout: made up\nterms: {expiry: {type: date}}\nevents:\n  - at: expiry\n    pay: spot\n"
 
 
 @pytest.fixture
@@ -126,7 +127,7 @@ def test_the_library():
 
 def test_a_definition_of_ones_own(tmp_path: Path):
     """Beside the contract, in any order; unused ones are checked too."""
-    own = "payoff: half\nabout: half of the level\nterms: {expiry: {type: date}}\nevents:\n  - at: expiry\n    pay: spot / 2\n"
+    own = OWN.replace("own", "half").replace("spot", "spot / 2")
     contract = CALL.replace("european", "half").replace("{side: call, strike: 100, expiry: 1y}", "{expiry: 1y}")
     definition = written(tmp_path, own, "half.yaml")
     result = mcx.price(written(tmp_path, contract + MARKET), definition, paths=100_000, seed=SEED)
@@ -137,8 +138,9 @@ def test_a_definition_of_ones_own(tmp_path: Path):
 
 def test_a_refusal_names_the_path(tmp_path: Path):
     """A payoff that is not finite: contract, output, path, seed and stream, in one sentence."""
-    own = "payoff: root\nabout: of a fall\nterms: {expiry: {type: date}}\nevents:\n  - at: expiry\n    pay: sqrt(spot - 60)\n"
+    own = OWN.replace("own", "root").replace("spot", "sqrt(spot - 60)")
     contract = CALL.replace("european", "root").replace("{side: call, strike: 100, expiry: 1y}", "{expiry: 1y}")
-    with pytest.raises(Refusal, match=r"^'Call': 'price' is not a finite number on path \d+ \(seed 7, stream 0\); ") as found:
+    said = r"^'Call': 'price' is not a finite number on path \d+ \(seed 7, stream 0\); "
+    with pytest.raises(Refusal, match=said) as found:
         mcx.price(written(tmp_path, f"{contract}---\n{own}{MARKET}"), paths=100_000, seed=7)
     assert "\n" not in str(found.value)

@@ -165,5 +165,6 @@ def test_wrong_requests(tmp_path: Path):
     file = written(tmp_path, "harbour: {1y: 130}", "levels.yaml")
     with pytest.raises(RequestError, match="one contract at a time; the files hold 2"):
         package.readback(EXAMPLES / "autocall.yaml", path=file)
-    refused(mcx("readback", written(tmp_path, CALL), "--path", tmp_path / "none.csv"), "none.csv: the levels cannot be read")
-    refused(mcx("readback", written(tmp_path, CALL), "--path", written(tmp_path, "x: {1y: -1}", "l.yaml")), "l.yaml:1:1: ")
+    call, wrong = written(tmp_path, CALL), written(tmp_path, "x: {1y: -1}", "l.yaml")
+    refused(mcx("readback", call, "--path", tmp_path / "none.csv"), "none.csv: the levels cannot be read")
+    refused(mcx("readback", call, "--path", wrong), "l.yaml:1:1: ")

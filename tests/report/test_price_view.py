@@ -41,7 +41,8 @@ def test_headline(note: PriceResult, price: float, error: float, percent: bool, 
     """Price and half-width of the 95 % interval, in the unit of the price, with as many decimals as the error says."""
     half = 1.959963984540054 * error
     size = {} if percent else {"notional": None, "units": 1.0}
-    assert headline(replace(note, price=price, standard_error=error, interval95=(price - half, price + half), **size)) == said
+    result = replace(note, price=price, standard_error=error, interval95=(price - half, price + half), **size)
+    assert headline(result) == said
 
 
 def test_probabilities_by_date(note: PriceResult, monkeypatch: pytest.MonkeyPatch):
