@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import signal
 import tempfile
 
 import pytest
@@ -17,6 +18,7 @@ settings.load_profile(os.environ.get("HYPOTHESIS_PROFILE", "repeatable"))
 
 
 def pytest_configure(config: pytest.Config) -> None:
+    signal.signal(signal.SIGINT, signal.default_int_handler)  # ignored in shells' background jobs; tests press Ctrl-C
     config.addinivalue_line("filterwarnings", "error")
     config.addinivalue_line("markers", "slow: minutes long, run with --slow")
 

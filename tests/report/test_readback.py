@@ -172,6 +172,20 @@ def test_what_the_terms_rule_out_is_left_away():
         assert ("at or below" in text) == (terms["direction"] == "down")
 
 
+@pytest.mark.parametrize(("kind", "words"), [
+    ("knocked", "On expiry (1y), if spot is below level (100): pays 1 for each unit, due the same day."),
+    ("always", "On expiry (1y): pays 1 for each unit, due the same day."),
+    ("never", "Never in this contract: its terms rule the condition out."),
+])
+def test_decided_parts_of_conditions_are_left_away(kind: str, words: str, tmp_path: Path):
+    """What a choice decides of an 'and' or an 'or' is not said; what it rules out altogether is."""
+    payoff = ("terms:\n  level: {type: number}\n  kind: {type: choice, of: [knocked, always, never]}\n"
+              "  expiry: {type: date}\nevents:\n  - at: expiry\n    if: kind != 'never' and (kind == 'always' or spot < level)\n"
+              "    then:\n      - pay: 1\n")
+    (event,) = read(tmp_path, payoff, f"{{level: 100, kind: {kind}, expiry: 1y}}").events
+    assert event.text == words
+
+
 def test_watches_that_are_refused_are_said(tmp_path: Path):
     """A continuous watch on two assets: refused, with the place of the definition, where `price` refuses it too."""
     payoff = ("assets: 2\nterms: {level: {type: number}, watched: {type: watch}, expiry: {type: date}}\nrunning:\n"
