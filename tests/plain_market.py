@@ -32,6 +32,7 @@ class PlainMarket:
         self.currency = contract.currency
         self.market = market
         self.assets = [market.assets[name] for name in contract.assets]
+        self.nodes = self.times_of_change()
 
     @staticmethod
     def line(curve: Curve, time: float, height: Callable[[float, float], float], flat: bool = False) -> float:
@@ -77,7 +78,7 @@ class PlainMarket:
         names = (self.assets[one].name, self.assets[other].name)
         return (self.market.correlation.get(names) or self.market.correlation[names[::-1]]).value
 
-    def nodes(self) -> list[float]:
+    def times_of_change(self) -> list[float]:
         """Times at which a rate, yield or vol of the contract's assets may change."""
         curves: list[Curve | None] = []
         for asset in self.assets:
@@ -87,7 +88,7 @@ class PlainMarket:
 
     def covariance(self, one: int, other: int, start: float, end: float) -> float:
         """Correlation times the integral of both vols, piece by piece between the nodes."""
-        cuts = [start, *(t for t in self.nodes() if start < t < end), end]
+        cuts = [start, *(t for t in self.nodes if start < t < end), end]
         total = 0.0
         for t0, t1 in zip(cuts, cuts[1:], strict=False):
             gains = [max(self.variance(k, t1) - self.variance(k, t0), 0.0) for k in (one, other)]

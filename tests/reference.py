@@ -19,7 +19,7 @@ from mcx.checked import formula as trees
 from mcx.checked.contract import Figures, Word
 from mcx.checked.market import Market
 from mcx.checked.payoff import Assign, End, Event, Pay, Running
-from mcx.dates.dated_contract import DatedContract, DatedEvent, Moment, Occasion, Update, Watch
+from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Moment, Occasion, Update, Watch
 from mcx.faults import Place
 
 Value = float | bool | tuple  # a number, a flag, or one of them for each asset
@@ -65,17 +65,38 @@ def elementwise(function: Callable, *values: Value) -> Value:
     return tuple(rows) if any(isinstance(value, tuple) for value in values) else rows[0]
 
 
+@dataclass(frozen=True)
+class Payment:
+    """An amount discounted to the valuation date, and when it is paid (years)."""
+
+    leg: str
+    part: str
+    time: float
+    value: float
+
+
 @dataclass
 class Result:
-    """What one path paid: discounted amounts by leg, and the names of the events whose condition held."""
+    """What one path paid, and the named events whose condition held, with their days."""
 
-    legs: dict[str, float] = field(default_factory=dict)
-    met: set[str] = field(default_factory=set)
-    ended: float | None = None  # when an `end` was reached
+    payments: list[Payment] = field(default_factory=list)
+    met: set[tuple[str, Day]] = field(default_factory=set)
+    ended: Day | None = None  # when an `end` was reached
+    life: float = 0.0  # years to the payment due for that, or to the last possible payment
 
     @property
     def price(self) -> float:
-        return sum(self.legs.values())
+        return sum(payment.value for payment in self.payments)
+
+    def leg(self, name: str) -> float:
+        return sum(payment.value for payment in self.payments if payment.leg == name)
+
+    def part(self, name: str) -> float:
+        return sum(payment.value for payment in self.payments if (payment.part or "unsorted") == name)
+
+    def held(self, name: str, day: str = "") -> bool:
+        """Whether a named event's condition held on a day, or on any."""
+        return any(name == other and day in ("", str(when)) for other, when in self.met)
 
 
 class Walk:
@@ -166,20 +187,22 @@ class Walk:
         """Formulas now speak of these levels and of this occasion of this running value or event."""
         self.occasion, self.owner, self.spot = occasion, owner.place, levels
 
-    def remember(self, formulas: Sequence[trees.Formula]) -> None:
-        """Keep what `previous` will ask for on the next date of this running value or event."""
-        queue, fresh = list(formulas), {}
+    def kept_for_next(self, formulas: Sequence[trees.Formula]) -> dict[tuple[Place, int], Value]:
+        """What `previous` in these formulas will ask for on the next date of this running value or event."""
+        queue, kept = list(formulas), {}
         while queue:
             for node in trees.walk(queue.pop()):
                 if isinstance(node, trees.Name) and node.name in self.lets:
                     queue.append(self.lets[node.name])
                 elif isinstance(node, trees.Previous):
-                    fresh[self.owner, id(node)] = self.evaluate(node.operand)
-        self.remembered |= fresh
+                    kept[self.owner, id(node)] = self.evaluate(node.operand)
+        return kept
 
     def observe(self, running: Running) -> None:
         """One more observation enters a running value."""
         value = self.evaluate(running.formula)
+        if self.occasion is not None:
+            self.remembered |= self.kept_for_next([running.formula])
         if running.how in ("total", "average", "product"):
             value = elementwise(float, value)
         name = running.name
@@ -188,22 +211,23 @@ class Walk:
 
     def happen(self, dated_event: DatedEvent) -> bool:
         """Carry out an event; True if the contract ends."""
-        event = dated_event.event
+        event, day = dated_event.event, dated_event.occasion.day
         holds = event.condition is None or all(row_of(self.evaluate(event.condition)))
         if holds and event.name:
-            self.result.met.add(event.name)
-        self.remember(formulas_of(event))
+            self.result.met.add((event.name, day))
+        kept, due = self.kept_for_next(formulas_of(event)), []
         for action in event.then if holds else event.otherwise:
             match action:
-                case Pay(amount=amount, leg=leg):
+                case Pay(amount=amount, leg=leg, part=part):
                     (paid,) = row_of(self.evaluate(amount))
-                    paid *= self.market.discount(dated_event.due[action].time)
-                    self.result.legs[leg] = self.result.legs.get(leg, 0.0) + paid
+                    due.append(dated_event.due[action].time)
+                    self.result.payments.append(Payment(leg, part, due[-1], paid * self.market.discount(due[-1])))
                 case Assign(values=values):
                     self.values.update([(name, self.evaluate(right)) for name, right in values])
                 case End():
-                    self.result.ended = dated_event.occasion.day.time
+                    self.result.ended, self.result.life = day, max(due, default=math.nan)
                     return True
+        self.remembered |= kept
         return False
 
 
@@ -237,7 +261,7 @@ class Reference:
         self.order = {running.name: k for k, running in enumerate(dated.contract.payoff.running)}
         self.sides = {watch.running.name: self.watched_sides(watch.running) for watch in dated.watches}
         for watch in dated.watches:
-            inside = [t for t in self.market.nodes() if watch.start.time < t < watch.end.time]
+            inside = [t for t in self.market.nodes if watch.start.time < t < watch.end.time]
             missing = {*map(self.snap, inside), self.snap(watch.end.time)} - {*grid, 0.0}
             assert not missing, f"{running_label(watch.running)} is watched over {sorted(missing)}, not on the grid"
 
@@ -276,6 +300,8 @@ class Reference:
         inside it, side 'low' or 'high'.
         """
         walk, levels = Walk(self.dated, self.market), self.spots
+        walk.result.life = max((day.time for moment in self.dated.moments for event in moment.events
+                                for day in event.due.values()), default=0.0)
         starts = {self.snap(watch.start.time) for watch in self.dated.watches}
         for time in sorted({0.0, *self.grid, *self.moments, *starts}):
             low = high = None
@@ -320,15 +346,18 @@ class Reference:
             if isinstance(item, Update):
                 walk.look(item.occasion, item.running, levels)
                 walk.observe(item.running)
-                walk.remember([item.running.formula])
                 continue
             seen = [levels] if self.snap(item.start.time) == time else [low, high] if low is not None else []
             for extreme in seen:
                 walk.look(None, item.running, extreme)
                 walk.observe(item.running)
-        for dated_event in (event for moment in moments for event in moment.events):
+        events = [event for moment in moments for event in moment.events]
+        for number, dated_event in enumerate(events):
             walk.look(dated_event.occasion, dated_event.event, levels)
             if walk.happen(dated_event):
+                if math.isnan(walk.result.life):  # nothing is paid with the end itself: what fell due that day, if any
+                    due = [day.time for event in events[: number + 1] for day in event.due.values()]
+                    walk.result.life = max(due, default=dated_event.occasion.day.time)
                 return True
         return False
 

@@ -132,7 +132,7 @@ def test_one_touch_law(direction: str, barrier: float):
     truth = touch_at_expiry(direction, "in", "cash", barrier, 1.0, **flat)
     market = "market: 0y\nrates: {EUR: 3%}\nassets:\n  harbour: {spot: 100, currency: EUR, yield: 1%, vol: 20%}\n"
     text = contract("touch", kind="one touch", direction=direction, barrier=barrier, cash=1)
-    check(price_of(text + market, PATHS, 0x1F83D9ABFB41BD6B), truth)
+    check(price_of(text + market, PATHS, 0x1F83D9ABFB41BD6B), truth, sharp=4e-3)
 
 
 @pytest.mark.parametrize(("side", "strike"), [("call", 105.0), ("put", 98.0), ("call", 90.0)])

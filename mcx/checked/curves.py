@@ -1,7 +1,7 @@
 """Quoted numbers and curves of a market document, and what makes them implausible.
 
-A number may stand alone or as `{value:, uncertain:, source:, as_of:}`; a curve is a flat number or numbers by tenor or
-date. Limits are there to catch slips of the pen (17 for 17%), not to judge markets.
+A number may stand alone or as `{value:, uncertain:, source:, as_of:}`; a curve is a flat number or numbers by
+tenor or date. Limits are there to catch slips of the pen (17 for 17%), not to judge markets.
 """
 
 from __future__ import annotations
@@ -39,7 +39,8 @@ def vol(node: Node) -> float | Fault:
     """A Black vol with its unit."""
     value = percent(node)
     if not isinstance(value, Fault) and not 0 < value <= MOST_VOL:
-        return expected(f"a vol above 0% and up to {MOST_VOL:.0%}", node, "is the unit right?" if value > 0 else "")
+        return expected(f"a vol above 0% and up to {MOST_VOL:.0%}", node,
+                        "is the unit right?" if value > 0 else "")
     return value
 
 
@@ -64,7 +65,8 @@ FORMS: dict[str, Number] = {"zero": rate, "vol": vol, "discount": discount_facto
 
 @dataclass(slots=True)
 class MarketReader:
-    """Reads numbers and curves as seen from one valuation date (None in textbook markets); collects faults."""
+    """Reads numbers and curves as seen from one valuation date (None in textbook markets); collects
+    faults."""
 
     valuation: datetime.date | None
     textbook: bool
@@ -99,7 +101,8 @@ class MarketReader:
     def _factors(self, node: Mapping, factors: bool) -> Curve | None:
         inner = node.get("discount_factors")
         if not factors:
-            self.faults.append(Fault(node.key("discount_factors").place, "discount factors stand for rates only"))
+            self.faults.append(Fault(node.key("discount_factors").place,
+                                     "discount factors stand for rates only"))
         elif not check_keys(node, (), ("discount_factors",), self.faults, "the curve"):
             pass
         elif isinstance(inner, Mapping):
@@ -120,8 +123,8 @@ class MarketReader:
             if time is None or quoted is None:
                 continue
             if points and time <= points[-1].time:
-                self.faults.append(Fault(label.place, f"'{label}' is not later than '{points[-1].label}'; a curve goes "
-                                                      f"forward in time"))
+                text = f"'{label}' is not later than '{points[-1].label}'; a curve goes forward in time"
+                self.faults.append(Fault(label.place, text))
                 continue
             points.append(Point(time, label.text, quoted))
         if not node.entries:
@@ -135,7 +138,8 @@ class MarketReader:
         if DATE.fullmatch(label.text):
             day = value_of(label, date, self.faults)
             if self.textbook:
-                self.faults.append(expected("a tenor in years or months", label, "a textbook market has no dates"))
+                self.faults.append(expected("a tenor in years or months", label,
+                                            "a textbook market has no dates"))
                 return None
         else:
             span = value_of(label, tenor, self.faults)
@@ -151,7 +155,8 @@ class MarketReader:
 
     def _plain_time(self, label: Scalar, count: float, unit: str) -> float | None:
         if unit not in MONTHS:
-            self.faults.append(expected("a tenor in years or months", label, "a textbook market has no dates"))
+            self.faults.append(expected("a tenor in years or months", label,
+                                        "a textbook market has no dates"))
         elif count == 0:
             self.faults.append(expected("a tenor above 0", label))
         else:
@@ -178,9 +183,9 @@ class MarketReader:
             held, total = (one.quoted.value**2 * one.time for one in (before, point))
             if total < held * (1 - 1e-12):
                 least = math.ceil(1e6 * math.sqrt(held / point.time)) / 1e4  # percent, rounded up
-                self.faults.append(Fault(point.quoted.place, (
-                    f"total variance falls from {held:.6g} at '{before.label}' to {total:.6g} at '{point.label}'; a vol "
-                    f"of {least:.4f}% is the least that '{point.label}' can have")))
+                text = (f"total variance falls from {held:.6g} at '{before.label}' to {total:.6g} at "
+                        f"'{point.label}'; a vol of {least:.4f}% is the least that '{point.label}' can have")
+                self.faults.append(Fault(point.quoted.place, text))
 
 
 def half_width(parse: Number) -> Number:

@@ -1,4 +1,5 @@
-"""The definitions at hand: the shipped ones, one file each in `payoffs/`, and those that the user gives along.
+"""The definitions at hand: the shipped ones, one file each in `payoffs/`, and those that the user gives
+along.
 
 An installed package holds the folder inside itself; in a checkout it stands beside the package.
 """
@@ -45,7 +46,8 @@ def stands_for_shipped(definition: Document) -> bool:
 
 
 class Definitions(Mapping[str, Document]):
-    """Definitions by name, the user's own before the shipped ones; a shipped one is read when it is asked for."""
+    """Definitions by name, the user's own before the shipped ones; a shipped one is read when it is asked
+    for."""
 
     def __init__(self, own: Iterable[Document] = ()):
         self._own = {name.text: document for document in own if (name := _name(document))}
@@ -74,7 +76,8 @@ def clashes(own: Iterable[Document]) -> list[Fault]:
     faults = []
     for name in filter(None, map(_name, own)):
         if name.text in seen:
-            faults.append(Fault(name.place, f"the payoff '{name}' is defined at {seen[name.text].place} already"))
+            faults.append(Fault(name.place,
+                                f"the payoff '{name}' is defined at {seen[name.text].place} already"))
         seen.setdefault(name.text, name)
     return faults
 

@@ -1,7 +1,7 @@
 """From files to a checked request: every contract, the market, and every fault of all documents at once.
 
-`request` gives what it could make of the files with the faults it found; `load` raises them. What no single document
-can show is checked here, by small functions in `CROSS_CHECKS`, each returning its own faults.
+`request` gives what it could make of the files with the faults it found; `load` raises them. What no single
+document can show is checked here, by small functions in `CROSS_CHECKS`, each returning its own faults.
 """
 
 from __future__ import annotations
@@ -27,8 +27,8 @@ NO_FUNDING = "no issuer funding spread: the amounts are discounted at the market
 
 @dataclass(frozen=True, slots=True)
 class Request:
-    """What was asked about: contracts in order of the files, the market if one was given, the definitions used or
-    given along, and all documents."""
+    """What was asked about: contracts in order of the files, the market if one was given, the definitions
+    used or given along, and all documents."""
 
     contracts: tuple[Contract, ...]
     market: Market | None
@@ -60,7 +60,9 @@ def request(files: Iterable[str | Path]) -> tuple[Request, list[Fault]]:
     return checked_request(documents, faults)
 
 
-def checked_request(documents: Iterable[Document], faults: Iterable[Fault] = ()) -> tuple[Request, list[Fault]]:
+def checked_request(
+    documents: Iterable[Document], faults: Iterable[Fault] = ()
+) -> tuple[Request, list[Fault]]:
     """As `request`, from documents that are read already."""
     documents, faults = tuple(documents), list(faults)
     kinds: dict[str, list[Document]] = {}
@@ -68,7 +70,9 @@ def checked_request(documents: Iterable[Document], faults: Iterable[Fault] = ())
         kinds.setdefault(document.kind, []).append(document)
     own = kinds.get("payoff", [])
     definitions = Definitions(own)
-    faults += clashes(own) + _only_one_market(kinds.get("market", [])) + _same_title(kinds.get("contract", []))
+    faults += clashes(own)
+    faults += _only_one_market(kinds.get("market", []))
+    faults += _same_title(kinds.get("contract", []))
     used: dict[str, Document] = {}
     contracts: list[tuple[Contract, Mapping]] = []
     for document in kinds.get("contract", []):
@@ -106,8 +110,8 @@ def _same_title(contracts: list[Document]) -> list[Fault]:
         node = document.body.get("contract")
         title = " ".join(getattr(node, "text", "").split())
         if title in seen:
-            faults.append(Fault(node.place, f"the contract '{title}' stands at {seen[title]} already; in one call every "
-                                            f"contract needs its own title"))
+            text = f"the contract '{title}' stands at {seen[title]} already; each needs its own title"
+            faults.append(Fault(node.place, text))
         elif title:
             seen[title] = node.place
     return faults
@@ -158,8 +162,8 @@ def funding_stated(pair: Pair) -> list[Fault]:
     currency = pair.contract.currency
     if pair.contract.notional is None or currency in pair.market.funding:
         return []
-    text = (f"no funding spread for '{currency}', the currency of the note '{pair.contract.title}'; write 'funding: "
-            f"{{{currency}: 0 bp}}' to value it without the issuer's spread")
+    text = (f"no funding spread for '{currency}', the currency of the note '{pair.contract.title}'; write "
+            f"'funding: {{{currency}: 0 bp}}' to value it without the issuer's spread")
     return [Fault(_place(pair.market_body, "funding" if "funding" in pair.market_body else "market"), text)]
 
 
@@ -175,13 +179,14 @@ def assets_known(pair: Pair) -> list[Fault]:
             faults.append(Fault(place, f"the market has no asset '{name}'{near}"))
         elif asset.currency and asset.currency != pair.contract.currency:
             text = (f"'{name}' is quoted in {asset.currency}, but '{pair.contract.title}' pays in "
-                    f"{pair.contract.currency}; paying in another currency (quanto) belongs to a later version")
+                    f"{pair.contract.currency}; paying in another currency (quanto) is for a later version")
             faults.append(Fault(asset.place, text))
     return faults
 
 
 def correlations_known(pair: Pair) -> list[Fault]:
-    """Every pair of the contract's assets has its correlation, and together they make a correlation matrix."""
+    """Every pair of the contract's assets has its correlation, and together they make a correlation
+    matrix."""
     market, assets = pair.market, pair.contract.assets
     known = [name for name in assets if name in market.assets]
     place = _place(pair.market_body, "correlation" if "correlation" in pair.market_body else "market")
@@ -193,15 +198,15 @@ def correlations_known(pair: Pair) -> list[Fault]:
         return []
     from mcx.checked.nearest_correlation import nearest_correlation, smallest_eigenvalue
 
-    rows = [[1.0 if a == b else (market.correlation.get((a, b)) or market.correlation[b, a]).value for b in known]
-            for a in known]
+    stated = market.correlation | {pair[::-1]: quoted for pair, quoted in market.correlation.items()}
+    rows = [[1.0 if a == b else stated[a, b].value for b in known] for a in known]
     smallest = smallest_eigenvalue(rows)
     if smallest >= 0:
         return []
     nearest = nearest_correlation(rows)
     told = ", ".join(f"{a}/{b}: {100 * nearest[i][j]:.4f}%"
                      for (i, a), (j, b) in combinations(enumerate(known), 2))
-    return [Fault(place, f"no assets can be correlated like this (the smallest eigenvalue of the matrix is "
+    return [Fault(place, "no assets can be correlated like this (the smallest eigenvalue of the matrix is "
                          f"{smallest:.3g}); the nearest correlations that can be: {told}")]
 
 

@@ -1,7 +1,7 @@
 """Correlation matrices: is one valid, and which valid one is nearest to it.
 
-The nearest is found by alternating projections with Dykstra's correction, N. J. Higham (2002), "Computing the nearest
-correlation matrix: a problem from finance", IMA Journal of Numerical Analysis 22, Algorithm 3.3.
+The nearest is found by alternating projections with Dykstra's correction, N. J. Higham (2002), "Computing the
+nearest correlation matrix: a problem from finance", IMA Journal of Numerical Analysis 22, Algorithm 3.3.
 """
 
 from __future__ import annotations
@@ -24,8 +24,8 @@ def smallest_eigenvalue(rows: Rows) -> float:
 
 
 def nearest_correlation(rows: Rows) -> list[list[float]]:
-    """The correlation matrix nearest to a symmetric one in the Frobenius norm, drawn inwards by as little as keeps it
-    valid when its entries are rounded to six decimals."""
+    """The correlation matrix nearest to a symmetric one in the Frobenius norm, drawn inwards by as little
+    as keeps it valid when its entries are rounded to six decimals."""
     import numpy as np
 
     matrix = np.asarray(rows, dtype=float)

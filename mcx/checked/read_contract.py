@@ -1,7 +1,8 @@
-"""From a `contract:` document to a `Contract`: a payoff's terms filled in, and everything stated that it needs.
+"""From a `contract:` document to a `Contract`: a payoff's terms filled in, and everything stated that it
+needs.
 
-Contracts with calendar dates must state start, settlement and calendar; textbook contracts use times and none of
-these. Read `read_contract` first; the values of the terms are read in `term_values.py`.
+Contracts with calendar dates must state start, settlement and calendar; textbook contracts use times and none
+of these. Read `read_contract` first; the values of the terms are read in `term_values.py`.
 """
 
 from __future__ import annotations
@@ -15,17 +16,29 @@ from mcx.checked.contract import BusinessDays, Contract, DayRef, DayRule, Period
 from mcx.checked.formula import Formula, Name, walk
 from mcx.checked.payoff import Assign, Pay, Payoff
 from mcx.checked.read_payoff import read_payoff
-from mcx.checked.reading import check_keys, items_of, listed, mapping_of, one_of, read, text_of, value_of
+from mcx.checked.reading import (
+    check_keys,
+    items_of,
+    listed,
+    mapping_of,
+    offered,
+    one_of,
+    read,
+    text_of,
+    value_of,
+)
 from mcx.checked.term_values import TermReader
 from mcx.checked.values import amount, asset_name, currency_code
 from mcx.faults import Fault, did_you_mean
-from mcx.text.located import Document, Mapping, Node, Scalar
-from mcx.text.scalars import date, expected, period, word
+from mcx.text.located import Document, Mapping, Node, Scalar, Sequence
+from mcx.text.scalars import date, expected, period, shortened, word
 
-KEYS = ("contract", "currency", "notional", "units", "assets", "start", "day_count", "settlement", "calendar", "payoff",
-        "terms")
+KEYS = ("contract", "currency", "notional", "units", "assets", "start", "day_count", "settlement", "calendar",
+        "payoff", "terms")
+REQUIRED = ("contract", "currency", "assets", "payoff", "terms")
 CALENDAR_KEYS = ("start", "day_count", "settlement", "calendar")  # not for textbook contracts
 LATER = ("happened", "fixings", "dividends", "quanto", "adjustments", "rounding", "disruption")
+LONGEST_LAG = 250  # business days, a year
 ROLLS = ("following", "modified following", "preceding")
 
 # The names of 2006 ISDA Definitions, section 4.16, each with the one that `dates/day_counts.py` uses.
@@ -45,9 +58,10 @@ DAY_COUNTS: MappingProxyType[str, str] = MappingProxyType({
 def read_contract(
     document: Document, definitions: MappingOf[str, Document]
 ) -> tuple[Contract | None, list[Fault]]:
-    """The contract that a document says, None if anything is wrong with it; `definitions` gives payoffs by name."""
+    """The contract that a document says, None if anything is wrong with it; `definitions` gives payoffs by
+    name."""
     body, faults = document.body, []
-    check_keys(body, KEYS, ("contract", "currency", "assets", "payoff", "terms"), faults, "the contract", LATER)
+    check_keys(body, KEYS, REQUIRED, faults, "the contract", LATER)
     size = _size(body, faults)
     assets = asset_names(body.get("assets"), faults)
     payoff = _payoff(body, definitions, assets, faults)
@@ -69,35 +83,36 @@ def read_contract(
     return Contract(
         title=title, currency=currency, assets=assets, payoff=_begun(payoff, values), terms=values,
         place=body.get("contract").place, notional=size.get("notional"), units=size.get("units"), start=start,
-        day_count=day_count or "", settlement=settlement, calendar=calendar, textbook=textbook, text=document.text,
+        day_count=day_count or "", settlement=settlement, calendar=calendar, textbook=textbook,
+        text=document.text,
     ), []
 
 
 def asset_names(node: Node | None, faults: list[Fault]) -> tuple[str, ...]:
     """The contract's assets in its own order; () where any of them is wrong."""
     items = items_of(node, faults, "a list of assets, as '[harbour]'")
-    if node is not None and not items:
-        faults.append(expected("a list of assets, as '[harbour]'", node))
+    if isinstance(node, Sequence) and not items:
+        faults.append(expected("one asset or more", node, "the list is empty"))
     names: list[str] = []
     sound = True
     for item in items:
         name = value_of(item, asset_name, faults)
-        if name in names:
+        twice = name in names
+        if twice:
             faults.append(Fault(item.place, f"'{name}' stands twice in 'assets'"))
-        sound = sound and name is not None and name not in names
-        names.append(name)
+        sound = sound and name is not None and not twice
+        names += [name] if name is not None else []
     return tuple(names) if sound else ()
 
 
 def _size(body: Mapping, faults: list[Fault]) -> dict[str, float]:
     """The notional or the number of units, exactly one of them."""
     stated = [key for key in ("notional", "units") if key in body]
+    two = "'notional' (payments are multiples of it) or 'units' (payments are money per unit)"
     if len(stated) == 2:
-        faults.append(Fault(body.key("units").place, "a contract has a 'notional' (payments are multiples of it) or "
-                                                     "'units' (payments are money per unit), not both"))
+        faults.append(Fault(body.key("units").place, f"a contract has {two}, not both"))
     elif not stated:
-        faults.append(Fault(body.place, "'notional' (payments are multiples of it) or 'units' (payments are money per "
-                                        "unit) is missing in the contract"))
+        faults.append(Fault(body.place, f"{two} is missing in the contract"))
     return {key: read(body, key, amount, faults) for key in stated}
 
 
@@ -109,15 +124,15 @@ def _payoff(
     if name is None:
         return None
     if name not in definitions:
-        near = did_you_mean(name, definitions) or f"; expected one of {listed(definitions)}"
-        faults.append(Fault(body.get("payoff").place, f"there is no payoff '{name}'{near}"))
+        text = f"there is no payoff '{shortened(name)}'{offered(name, definitions)}"
+        faults.append(Fault(body.get("payoff").place, text))
         return None
     payoff, wrong = read_payoff(definitions[name], assets=len(assets) or None, asset_names=assets)
     faults += wrong
     if payoff and assets:
         fewest, most = payoff.assets
         if len(assets) < fewest or (most is not None and len(assets) > most):
-            wanted = str(fewest) if most == fewest else f"{fewest} or more" if most is None else f"{fewest} to {most}"
+            wanted = f"{fewest} or more" if most is None else f"{fewest}"
             text = f"'{name}' takes {wanted} asset{'' if wanted == '1' else 's'}, found {len(assets)}"
             faults.append(Fault(body.get("assets").place, text))
             return None
@@ -133,6 +148,8 @@ def _settlement(node: Node) -> Period | Fault:
     found = period(node)
     if isinstance(found, Fault) or found[1] != "business day":
         return expected("a number of business days, as '2 business days'", node)
+    if found[0] > LONGEST_LAG:
+        return expected(f"a lag of at most {LONGEST_LAG} business days", node)
     return Period(*found)
 
 
@@ -160,39 +177,48 @@ def _is_textbook(written: list[DayRef]) -> bool:
     return any(ref.time is not None for ref in written) and not any(ref.date for ref in written)
 
 
-def _check_times(written: list[DayRef], textbook: bool, values: dict[str, TermValue], faults: list[Fault]) -> None:
+def _check_times(written: list[DayRef], textbook: bool, values: dict[str, TermValue],
+                 faults: list[Fault]) -> None:
     """Calendar dates and times in one contract, and rules that do not fit the kind of contract."""
     first: datetime.date | None = next((ref.date for ref in written if ref.date), None)
     for ref in written:
         if ref.time is not None and first:
-            faults.append(Fault(ref.place, f"this is a time, but the contract uses calendar dates such as {first}; it "
-                                           f"may use the one or the other"))
+            text = f"this is a time, but the contract uses calendar dates, as {first}"
+            faults.append(Fault(ref.place, text))
     for value in values.values():
-        if not isinstance(value, DayRule):
-            continue
-        if not textbook and value.count is not None:
-            faults.append(Fault(value.place, "equal steps ('count') are for times; with calendar dates write "
-                                             "'{from: ..., until: ..., every: 3 months}'"))
-        elif not textbook and value.start is None:
-            faults.append(Fault(value.place, "'from' is missing in the date rule"))
-        elif textbook and value.every and value.every.unit not in ("month", "year"):
-            faults.append(Fault(value.place, f"a step of {value.every.unit}s needs calendar dates; with times write "
-                                             f"months or years, or '{{count: 52, until: 1y}}'"))
+        text = _unfit_rule(value, textbook) if isinstance(value, DayRule) else ""
+        if text:
+            faults.append(Fault(value.place, text))
+
+
+def _unfit_rule(rule: DayRule, textbook: bool) -> str:
+    """What is wrong with a rule in a contract of times or of dates, or ''."""
+    if textbook and rule.every and rule.every.unit not in ("month", "year"):
+        return (f"a step of {rule.every.unit}s needs calendar dates; with times write months or years, or "
+                f"'{{count: 52, until: 1y}}'")
+    if not textbook and rule.count is not None:
+        return ("equal steps ('count') are for times; with calendar dates write '{from: ..., until: ..., "
+                "every: 3 months}'")
+    if not textbook and rule.start is None:
+        return "'from' is missing in the date rule"
+    return ""
 
 
 def _check_calendar_keys(body: Mapping, textbook: bool, payoff: Payoff, faults: list[Fault]) -> None:
-    """Start, settlement and calendar stand in calendar contracts, and in no other; the day count where it is used."""
+    """Start, settlement and calendar stand in calendar contracts, and in no other; the day count where it
+    is used."""
     if textbook:
         for key in CALENDAR_KEYS:
             if key in body:
-                faults.append(Fault(body.key(key).place, f"'{key}' belongs to contracts with calendar dates; this one "
-                                                         f"uses times"))
+                text = f"'{key}' belongs to contracts with calendar dates; this one uses times"
+                faults.append(Fault(body.key(key).place, text))
         return
     for key in ("start", "settlement", "calendar"):
         if key not in body:
             faults.append(Fault(body.place, f"'{key}' is missing in the contract"))
     if "day_count" not in body and _uses_period(payoff):
-        faults.append(Fault(body.place, f"'day_count' is missing in the contract: '{payoff.name}' pays by 'period'"))
+        text = f"'day_count' is missing in the contract: '{payoff.name}' pays by 'period'"
+        faults.append(Fault(body.place, text))
 
 
 def _uses_period(payoff: Payoff) -> bool:
@@ -208,10 +234,9 @@ def _uses_period(payoff: Payoff) -> bool:
 
 def _begun(payoff: Payoff, values: dict[str, TermValue]) -> Payoff:
     """The payoff with no `start` where that names an optional term that this contract does not state."""
-    optional = {term.name for term in payoff.terms}
+    absent = {term.name for term in payoff.terms} - set(values)
     running = tuple(
-        replace(one, start=None)
-        if isinstance(one.start, Name) and one.start.name in optional and one.start.name not in values else one
+        replace(one, start=None) if isinstance(one.start, Name) and one.start.name in absent else one
         for one in payoff.running
     )
     return replace(payoff, running=running)

@@ -102,7 +102,7 @@ class EventReader:
 
     def _action_of(self, node: Mapping) -> Action | None:
         """The one action among the keys of a mapping."""
-        stated = [key for key in ACTIONS if key in node]
+        stated = [key for key in node.keys() if key in ACTIONS]
         for key in stated[1:]:
             self.faults.append(Fault(node.key(key).place, f"'{key}' is a second action beside '{stated[0]}'; begin "
                                                           "it on a line of its own, under 'then' or in its own event"))

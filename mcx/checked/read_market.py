@@ -1,7 +1,8 @@
-"""From a `market:` document to a `Market`: everything observed on the valuation date, each number as it was stated.
+"""From a `market:` document to a `Market`: everything observed on the valuation date, each number as it was
+stated.
 
-Curves and single numbers are read in `curves.py`. What needs a contract to be judged (is every asset there, does the
-correlation matrix hold) is checked in `load.py`.
+Curves and single numbers are read in `curves.py`. What needs a contract to be judged (is every asset there,
+does the correlation matrix hold) is checked in `load.py`.
 """
 
 from __future__ import annotations
@@ -82,7 +83,8 @@ def _asset(reader: MarketReader, name: Scalar, node: Node) -> AssetMarket | None
     if "yield" in node and "forwards" in node:
         faults.append(Fault(node.key("forwards").place, f"{what} has both 'yield' and 'forwards'; keep one"))
     if not {"yield", "forwards", "dividends"} & set(node.keys()):
-        faults.append(Fault(node.place, f"'yield' or 'forwards' is missing in {what}; write 'yield: 0%' for none"))
+        faults.append(Fault(node.place,
+                            f"'yield' or 'forwards' is missing in {what}; write 'yield: 0%' for none"))
     curves = {key: reader.curve(node.get(key), form)
               for key, form in (("vol", "vol"), ("yield", "zero"), ("forwards", "forward")) if key in node}
     spot = reader.quoted(node.get("spot"), amount) if "spot" in node else None
@@ -112,7 +114,8 @@ def _correlations(
         if names[0] == names[1] and not unknown:
             faults.append(expected("two different assets", key))
         elif names in found or names[::-1] in found:
-            faults.append(Fault(key.place, f"the correlation of '{names[0]}' and '{names[1]}' is given twice"))
+            faults.append(Fault(key.place,
+                                f"the correlation of '{names[0]}' and '{names[1]}' is given twice"))
         elif quoted is not None:
             found[names] = quoted
     return found

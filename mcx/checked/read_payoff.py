@@ -145,7 +145,7 @@ class _Reader:
             return broken
         if not check_keys(node, (*HOWS, "at", "start"), (), self.faults, f"the running value '{key}'"):
             return broken
-        hows = [how for how in HOWS if how in node]
+        hows = [key for key in node.keys() if key in HOWS]
         for how in hows[1:]:
             self.faults.append(Fault(node.key(how).place, f"'{how}' is a second rule beside '{hows[0]}'; keep one"))
         if len(hows) > 1:

@@ -31,15 +31,18 @@ def check_keys(
     before = len(faults)
     required, later = tuple(required), tuple(later)
     known = dict.fromkeys((*required, *allowed))
+    meant = set()  # a key that was misspelt is not missing as well
     for key, _ in mapping.entries:
         if key.text in known:
             continue
         if key.text in later:
             faults.append(later_version(key, f"'{key.text}' is a key"))
             continue
-        faults.append(Fault(key.place, f"'{shortened(key.text)}' is not a key of {what}{offered(key.text, known)}"))
+        near = offered(key.text, known)
+        meant |= {name for name in required if near == f"; did you mean '{name}'?"}
+        faults.append(Fault(key.place, f"'{shortened(key.text)}' is not a key of {what}{near}"))
     for key in required:
-        if key not in mapping:
+        if key not in mapping and key not in meant:
             faults.append(Fault(mapping.place, f"'{key}' is missing in {what}"))
     return len(faults) == before
 

@@ -1,7 +1,7 @@
 """The values of a contract's terms, each read as its type in the definition says.
 
-Numbers, percentages and levels become `Figures`; choices, assets and flags `Word`s; dates stay as they were written
-(`DayRef`, `DayList`, `DayRule`, `Stretch`) until `dates/` works them out.
+Numbers, percentages and levels become `Figures`; choices, assets and flags `Word`s; dates stay as they were
+written (`DayRef`, `DayList`, `DayRule`, `Stretch`) until `dates/` works them out.
 """
 
 from __future__ import annotations
@@ -9,18 +9,9 @@ from __future__ import annotations
 import re
 from collections.abc import Callable
 
-from mcx.checked.contract import (
-    DayList,
-    DayRef,
-    DayRule,
-    Figures,
-    Period,
-    Stretch,
-    TermValue,
-    Word,
-)
+from mcx.checked.contract import DayList, DayRef, DayRule, Figures, Period, Stretch, TermValue, Word
 from mcx.checked.payoff import Payoff, Term
-from mcx.checked.reading import check_keys, listed, one_of, value_of
+from mcx.checked.reading import check_keys, listed, offered, one_of, value_of
 from mcx.checked.values import amount
 from mcx.faults import Fault, Place, did_you_mean
 from mcx.text.located import Mapping, Node, Scalar, Sequence
@@ -32,8 +23,6 @@ ONE_OF_MANY = ("first", "last")
 SOME_OF_MANY = (*ONE_OF_MANY, "but_first", "but_last")
 A_DATE = "a date such as '2026-11-16', a time such as '0.25y' or the name of another date term"
 MOST_STEPS = 10_000
-
-
 NUMERIC: dict[str, Callable[[Node], float | Fault]] = {"number": number, "percent": percent, "level": amount}
 
 
@@ -50,10 +39,12 @@ class TermReader:
         terms = self.payoff.terms
         mapping = mapping or Mapping((), place)
         needed = [term.name for term in terms if not term.optional and term.default is None]
-        check_keys(mapping, [term.name for term in terms], needed, self.faults, f"the terms of '{self.payoff.name}'")
-        nodes = {term.name: mapping.get(term.name) or term.default for term in terms}
-        self.nodes = {name: node for name, node in nodes.items() if node is not None}
-        values = {term.name: self.value(term, nodes[term.name]) for term in terms if term.name in self.nodes}
+        check_keys(mapping, [term.name for term in terms], needed, self.faults,
+                   f"the terms of '{self.payoff.name}'")
+        defaults = {term.name: term.default for term in terms if term.default is not None}
+        self.nodes = defaults | {name.text: node for name, node in mapping.entries}
+        stated = [term for term in terms if term.name in self.nodes]
+        values = {term.name: self.value(term, self.nodes[term.name]) for term in stated}
         return {name: value for name, value in values.items() if value is not None}
 
     def value(self, term: Term, node: Node) -> TermValue | None:
@@ -61,6 +52,8 @@ class TermReader:
         match term.type:
             case "choice":
                 return self._word(one_of(node, term.choices, self.faults, f"'{term.name}' to be"), node)
+            case "asset" if not self.assets:  # the contract's assets are at fault
+                return None
             case "asset":
                 return self._word(one_of(node, self.assets, self.faults, f"'{term.name}' to be"), node)
             case "flag":
@@ -79,7 +72,8 @@ class TermReader:
         """One number, one for each date, one for each asset, or one for each of both."""
         if isinstance(node, Sequence) and term.per not in ("", "assets"):
             if not node.items:
-                self.faults.append(expected(f"one number for each date of '{term.per}'", node, "the list is empty"))
+                self.faults.append(expected(f"one number for each date of '{term.per}'", node,
+                                            "the list is empty"))
                 return None
             rows = [self._row(term, item) for item in node]
             if None in rows:
@@ -99,13 +93,15 @@ class TermReader:
             what = "one number, or a list with one for each date of " if term.per else "one number"
             self.faults.append(expected(what + (f"'{term.per}'" if term.per else ""), node))
             return None
+        elif not self.assets:  # the contract's assets are at fault
+            return None
         elif isinstance(node, Mapping):
             if not check_keys(node, (), self.assets, self.faults, f"'{term.name}', which goes by asset"):
                 return None
             nodes = [node.get(name) for name in self.assets]
         elif len(node) != len(self.assets):
-            text = f"'{term.name}' has {len(node)} numbers for {len(self.assets)} assets: {listed(self.assets)}"
-            self.faults.append(Fault(node.place, text))
+            assets = f"{len(self.assets)} assets: {listed(self.assets)}"
+            self.faults.append(Fault(node.place, f"'{term.name}' has {len(node)} numbers for {assets}"))
             return None
         else:
             nodes = list(node)
@@ -116,13 +112,15 @@ class TermReader:
         value = value_of(node, NUMERIC[term.type], self.faults)
         if value is None:
             return None
-        limits = [(term.above, value > (term.above or 0), "above"), (term.below, value < (term.below or 0), "below"),
+        limits = [(term.above, value > (term.above or 0), "above"),
+                  (term.below, value < (term.below or 0), "below"),
                   (term.at_least, value >= (term.at_least or 0), "at least"),
                   (term.at_most, value <= (term.at_most or 0), "at most")]
         for limit, holds, words in limits:
             if limit is not None and not holds:
                 bound = f"{100 * limit:.12g}%" if term.type == "percent" else f"{limit:.12g}"
-                self.faults.append(Fault(node.place, f"'{term.name}' must be {words} {bound}, found {shown(node)}"))
+                self.faults.append(Fault(node.place,
+                                         f"'{term.name}' must be {words} {bound}, found {shown(node)}"))
                 return None
         return value
 
@@ -153,18 +151,20 @@ class TermReader:
         """`{from:, until:, every:}` or `{count:, until:}`; with times `from` may be left out."""
         what = f"the date rule '{term.name}'"
         if "continuous" in node:
-            self.faults.append(Fault(node.key("continuous").place,
-                                     f"'{term.name}' is a list of dates; only a watch term can be continuous"))
+            text = f"'{term.name}' is a list of dates; only a watch term can be continuous"
+            self.faults.append(Fault(node.key("continuous").place, text))
             return None
         if "count" in node and "every" in node:
-            self.faults.append(Fault(node.key("count").place, f"{what} has both 'every' and 'count'; keep one"))
+            self.faults.append(Fault(node.key("count").place,
+                                     f"{what} has both 'every' and 'count'; keep one"))
             return None
         needed = ("until", "count" if "count" in node else "every")
         sound = check_keys(node, ("from",), needed, self.faults, what)
         start, until = (self._day(node.get(key)) if key in node else None for key in ("from", "until"))
         count = self._count(node.get("count")) if "count" in node else None
         every = self._every(node.get("every")) if "every" in node else None
-        if not sound or until is None or (start is None and "from" in node) or (count is None and every is None):
+        whole = sound and until is not None and ("from" not in node or start is not None)
+        if not whole or (count is None and every is None):
             return None
         return DayRule(node.place, until, start, every, count)
 
@@ -216,8 +216,7 @@ class TermReader:
         elif dated[name].type == "date":
             wrong = f"'{name}' is a single date; leave out '.{part}'" if part else ""
         elif part not in ("", *SOME_OF_MANY):
-            near = did_you_mean(part, SOME_OF_MANY)
-            wrong = f"'.{part}' is no part of '{name}'{near or f'; expected one of {listed(SOME_OF_MANY)}'}"
+            wrong = f"'.{part}' is no part of '{name}'{offered(part, SOME_OF_MANY)}"
         elif not many and part not in ONE_OF_MANY:
             wrong = f"'{node.text}' has several dates; expected one, as '{name}.first' or '{name}.last'"
         elif part not in ONE_OF_MANY and isinstance(told, Mapping) and "continuous" in told:

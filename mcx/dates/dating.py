@@ -1,7 +1,8 @@
 """From a contract to a dated contract: every observation and every payment on its day.
 
-`date_contract` is the door. Which day a date term means is worked out in `rules.py`; here schedules become occasions
-(with their numbers in the parent schedule), occasions become moments, and what only dates can show is found at fault.
+`date_contract` is the door. Which day a date term means is worked out in `rules.py`; here schedules become
+occasions (with their numbers in the parent schedule), occasions become moments, and what only dates can show
+is found at fault.
 """
 
 from __future__ import annotations
@@ -28,16 +29,16 @@ def date_contract(
 ) -> tuple[DatedContract | None, list[Fault]]:
     """The contract with every date known, and the faults that only dates can show.
 
-    Times are years from `valuation`; without one, from the contract's start. Optional date terms that are not stated
-    narrow nothing, and nothing happens at them.
+    Times are years from `valuation`; without one, from the contract's start. Optional date terms that are not
+    stated narrow nothing, and nothing happens at them.
     """
     good, faults = good_days(contract.calendar) if contract.calendar else (None, [])
     if faults:
         return None, faults
     base = None if contract.textbook else valuation or contract.start.date
     terms = TermDays(contract, base, good)
-    stated = [term for term in contract.payoff.terms if term.name in contract.terms and term.type in DATED_TYPES]
-    schedules = {term.name: terms.of_term(term.name) for term in stated}
+    schedules = {term.name: terms.of_term(term.name) for term in contract.payoff.terms
+                 if term.type in DATED_TYPES and term.name in contract.terms}
     faults = terms.faults + _wrong_lengths(contract, schedules)
     if faults:
         return None, faults
@@ -76,8 +77,8 @@ def _positions(contract: Contract, schedules: dict[str, tuple[Day, ...]]) -> dic
 class _Dating:
     """One contract on its way to a dated one; collects faults as it goes."""
 
-    def __init__(self, contract: Contract, valuation: datetime.date | None, schedules: dict[str, tuple[Day, ...]],
-                 start: Day, terms: TermDays, good: GoodDays | None):
+    def __init__(self, contract: Contract, valuation: datetime.date | None,
+                 schedules: dict[str, tuple[Day, ...]], start: Day, terms: TermDays, good: GoodDays | None):
         self.contract, self.payoff, self.valuation = contract, contract.payoff, valuation
         self.schedules, self.start, self.terms, self.good = schedules, start, terms, good
         self.positions = _positions(contract, schedules)
@@ -124,8 +125,8 @@ class _Dating:
             return False
         if day.time >= self.start.time:  # else that is the fault already
             self._fault(self.contract.terms[name].place,
-                        f"{what}{day} lies before the valuation date {self.valuation}; "
-                        f"a seasoned trade needs fixings, which a later version reads")
+                        f"{what}{day} lies before the valuation date {self.valuation}; a seasoned trade "
+                        "needs fixings, which a later version reads")
         return True
 
     def _observe(self, running: Running) -> None:
@@ -139,8 +140,9 @@ class _Dating:
         value = self.contract.terms.get(at.name)
         if isinstance(value, Stretch):
             if running.how not in WATCHABLE:
-                self._fault(value.place, f"'{running.name}' is the {running.how} of what it observes and cannot be "
-                                         f"watched continuously; {', '.join(WATCHABLE)} can")
+                text = (f"'{running.name}' is the {running.how} of what it observes and cannot be watched "
+                        f"continuously; {', '.join(WATCHABLE)} can")
+                self._fault(value.place, text)
             else:
                 self._watch(running, *self.schedules[at.name], at.name, value.place)
             return
@@ -167,11 +169,10 @@ class _Dating:
             return
         occasions = self._occasions(event.at, event.since, event.until)
         if not occasions and event.at.name in self.schedules:
-            narrowed = "".join(f" {word} '{name}'" for word, name in (("from", event.since), ("until", event.until))
-                               if name)
-            part = f".{event.at.part}" if event.at.part else ""
-            self.assumptions.append(f"'{event.name or 'the payment'}' never happens: "
-                                    f"no date of '{event.at.name}{part}'{narrowed}")
+            dates = f"'{event.at.name}.{event.at.part}'" if event.at.part else f"'{event.at.name}'"
+            dates += f" from '{event.since}'" if event.since else ""
+            dates += f" until '{event.until}'" if event.until else ""
+            self.assumptions.append(f"'{event.name or 'the payment'}' never happens: no date of {dates}")
         pays = [action for action in (*event.then, *event.otherwise) if isinstance(action, Pay)]
         for occasion in occasions:
             due = {pay: self._due(pay, occasion) for pay in pays}
@@ -203,43 +204,46 @@ class _Dating:
 
     def _due(self, pay: Pay, occasion: Occasion) -> Day:
         """When an amount is paid."""
-        day, contract = occasion.day, self.contract
+        day = occasion.day
         if pay.due == "same day":
             return day
         if pay.due not in self.schedules:
-            return self._after_lag(day, pay.place)
+            return self._after_lag(day)
         term = self.payoff.term(pay.due)
         position = 0 if term.type == "date" else occasion.dates.get(term.per)
         if position is None:
-            self._fault(pay.place, f"'{pay.due}' has one date for each date of '{term.per}', "
-                                   f"and {day} is none of them")
+            self._fault(pay.place, f"'{pay.due}' has one date for each date of '{term.per}', and {day} is "
+                                   "none of them")
             return day
         due = self.schedules[pay.due][position]
         if due.time < day.time:
-            value = contract.terms[pay.due]
-            place = value.days[position].place if isinstance(value, DayList) and len(value.days) > 1 else value.place
+            value = self.contract.terms[pay.due]
+            listed = isinstance(value, DayList) and len(value.days) > 1
+            place = value.days[position].place if listed else value.place
             self._fault(place, f"the payment of what is observed on {day} falls due before, on {due}")
         return due
 
-    def _after_lag(self, day: Day, place: Place) -> Day:
+    def _after_lag(self, day: Day) -> Day:
         if self.contract.settlement is None:
             return day
         try:
             return self.terms.day(self.good.add(day.date, self.contract.settlement.count))
         except NotCovered as beyond:
-            self._fault(place, f"the payment of {day}: {beyond}")
+            self._fault(self.contract.calendar.place, f"the payment of {day}: {beyond}")
             return day
 
 
 def _only(dated: DatedContract, live: frozenset[str]) -> DatedContract:
     """Without the running values that nothing reads: they are not observed."""
-    moments = (replace(moment, updates=tuple(update for update in moment.updates if update.running.name in live))
-               for moment in dated.moments)
-    moments = tuple(moment for moment in moments if moment.updates or moment.events)
+    moments = []
+    for moment in dated.moments:
+        updates = tuple(update for update in moment.updates if update.running.name in live)
+        if updates or moment.events:
+            moments.append(replace(moment, updates=updates))
     watches = tuple(watch for watch in dated.watches if watch.running.name in live)
-    today = [f"the observation on {moment.day}, the valuation date, uses the market's spot" for moment in moments[:1]
-             if moment.day.date and moment.day.date == dated.valuation]
-    return replace(dated, moments=moments, watches=watches, assumptions=(*dated.assumptions, *today))
+    today = [f"the observation on {moment.day}, the valuation date, uses the market's spot"
+             for moment in moments[:1] if moment.day.date and moment.day.date == dated.valuation]
+    return replace(dated, moments=tuple(moments), watches=watches, assumptions=(*dated.assumptions, *today))
 
 
 def _years(start: Day, day: Day) -> float:

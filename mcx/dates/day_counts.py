@@ -1,6 +1,7 @@
 """Year fractions by day count: 2006 ISDA Definitions, section 4.16, keyed by the names that it writes.
 
-The names that a contract may use stand in `checked/read_contract.py`, which turns each into the one used here.
+The names that a contract may use stand in `checked/read_contract.py`, which turns each into the one used
+here.
 """
 
 from __future__ import annotations
@@ -23,7 +24,8 @@ def actual_360(start: Date, end: Date) -> float:
 
 
 def thirty_360(start: Date, end: Date) -> float:
-    """Section 4.16(f): months of 30 days; the 31st counts as the 30th, at the end only if the start is at its 30th."""
+    """Section 4.16(f): months of 30 days; the 31st counts as the 30th, at the end only if the start is at
+    its 30th."""
     first = min(start.day, 30)
     return _thirty(start, first, end, 30 if end.day == 31 and first == 30 else end.day)
 
@@ -34,7 +36,8 @@ def thirty_e_360(start: Date, end: Date) -> float:
 
 
 def actual_actual(start: Date, end: Date) -> float:
-    """Section 4.16(b): days in leap years over 366, other days over 365; the first day counts, the last does not."""
+    """Section 4.16(b): days in leap years over 366, other days over 365; the first day counts, the last
+    does not."""
     total = 0.0
     for year in range(start.year, end.year + 1):
         opens, closes = Date(year, 1, 1), Date(year + 1, 1, 1)

@@ -1,8 +1,9 @@
 """What formulas read on their dates: every name must have its value when it is asked for.
 
-Since all dates are known, this is decided before anything is drawn. The walk below follows the moments in order, knows
-which running values have begun, and of each conditional that the terms settle reads only the branch that is taken.
-What it finds is kept by reader (an event or a running value), so that running values that nothing reads can be left out.
+Since all dates are known, this is decided before anything is drawn. The walk below follows the moments in
+order, knows which running values have begun, and of each conditional that the terms settle reads only the
+branch that is taken. What it finds is kept by reader (an event or a running value), so that running values
+that nothing reads can be left out.
 """
 
 from __future__ import annotations
@@ -13,7 +14,7 @@ from collections.abc import Callable
 from dataclasses import dataclass, field
 from types import MappingProxyType
 
-from mcx.checked.contract import Figures, Word
+from mcx.checked.contract import Contract, Figures, Word
 from mcx.checked.formula import (
     Binary,
     Call,
@@ -43,7 +44,8 @@ UNUSED_MATTERS = ("number", "percent", "level", "choice", "flag", "asset")
 
 @dataclass(slots=True)
 class Seen:
-    """What one event or running value read: names of terms and running values, and what was wrong, by name."""
+    """What one event or running value read: names of terms and running values, and what was wrong, by
+    name."""
 
     terms: set[str] = field(default_factory=set)
     running: set[str] = field(default_factory=set)
@@ -51,11 +53,11 @@ class Seen:
 
 
 def readings(dated: DatedContract) -> tuple[frozenset[str], list[Fault]]:
-    """The running values that payments depend on, and the faults of reading: names without a value where they are
-    read, and optional terms that the contract states but nothing reads."""
+    """The running values that payments depend on, and the faults of reading: names without a value where
+    they are read, and optional terms that the contract states but nothing reads."""
     walk = _Walk(dated)
     walk.along()
-    payoff, contract = dated.contract.payoff, dated.contract
+    payoff = dated.contract.payoff
     live: set[str] = set()
     queue = [walk.seen[event.place] for event in payoff.events if event.place in walk.seen]
     counted = Seen()
@@ -67,17 +69,21 @@ def readings(dated: DatedContract) -> tuple[frozenset[str], list[Fault]]:
             if running.name in seen.running and running.name not in live:
                 live.add(running.name)
                 queue += [walk.seen[running.place]] if running.place in walk.seen else []
-    faults = list(counted.wrong.values())
-    for term in payoff.terms:
-        if term.optional and term.type in UNUSED_MATTERS and term.name in contract.terms:
-            if term.name not in counted.terms and not faults:
-                faults.append(Fault(contract.terms[term.name].place,
-                                    f"'{term.name}' is stated, but with these terms '{payoff.name}' never reads it"))
+    faults = list(counted.wrong.values()) or _never_read(dated.contract, counted.terms)
     return frozenset(live), sorted(faults)
 
 
+def _never_read(contract: Contract, read: set[str]) -> list[Fault]:
+    """Optional terms that the contract states, although with its other terms they do not count."""
+    names = [term.name for term in contract.payoff.terms
+             if term.optional and term.type in UNUSED_MATTERS and term.name in contract.terms]
+    text = f"is stated, but with these terms '{contract.payoff.name}' never reads it"
+    return [Fault(contract.terms[name].place, f"'{name}' {text}") for name in names if name not in read]
+
+
 class _Walk:
-    """A walk along the moments with what is known on every path; `ready` holds the running values that have begun."""
+    """A walk along the moments with what is known on every path; `ready` holds the running values that
+    have begun."""
 
     def __init__(self, dated: DatedContract):
         self.dated, self.contract = dated, dated.contract
@@ -105,15 +111,17 @@ class _Walk:
             for update in moment.updates:
                 self._begin_watches(moment.day.time, self.order[update.running.name])
                 self._look(update.running, update.occasion)
+                fresh = self._memory(update.running.formula)
                 self._read(update.running.formula)
-                self._remember(update.running.formula)
+                self.remembered |= fresh
                 self.ready.add(update.running.name)
             self._begin_watches(moment.day.time, len(self.order))
-            if any([self._happen(event) for event in moment.events]):
+            if any(self._happen(event) for event in moment.events):  # after an end nothing is read
                 break
 
     def _begin_watches(self, time: float, before: int) -> None:
-        """Continuous watches that have begun; of those that begin now, the ones that stand above in the file."""
+        """Continuous watches that have begun; of those that begin now, the ones that stand above in the
+        file."""
         self.ready |= {watch.running.name for watch in self.dated.watches if watch.start.time < time
                        or (watch.start.time == time and self.order[watch.running.name] < before)}
 
@@ -126,7 +134,7 @@ class _Walk:
         event = dated_event.event
         self._look(event, dated_event.occasion)
         holds = self._read(event.condition) if event.condition is not None else 1.0
-        self._remember(*_formulas(event))
+        fresh = self._memory(*_formulas(event))
         taken = [*event.then] if holds is None or holds else []
         taken += [] if holds else event.otherwise
         for action in taken:
@@ -138,6 +146,7 @@ class _Walk:
                 self.ready |= {name for name, _ in action.values}
             else:
                 break
+        self.remembered |= fresh
         return bool(holds) and any(isinstance(action, End) for action in event.then)
 
     def _read(self, formula: Formula) -> float | None:
@@ -187,7 +196,8 @@ class _Walk:
             known = getattr(self.occasion, name, math.nan)
             if not math.isnan(known):
                 return known
-            self.owner.wrong.setdefault(name, Fault(place, f"'{name}' is not known here: it belongs to a date"))
+            self.owner.wrong.setdefault(name,
+                                        Fault(place, f"'{name}' is not known here: it belongs to a date"))
         return None
 
     def _term(self, name: str, place: Place) -> float | None:
@@ -201,8 +211,8 @@ class _Walk:
         if isinstance(stated, Figures) and stated.per_date:
             per = self.terms[name].per
             if self.occasion is None or per not in self.occasion.dates:
-                where = f"is read{self._on}, which is none of them" if self.occasion else "is read between them"
-                text = f"'{name}' has one value for each date of '{per}' and {where} ({place})"
+                where = f"{self._on}, which is none of them" if self.occasion else " between them"
+                text = f"'{name}' has one value for each date of '{per}' and is read{where} ({place})"
                 self.owner.wrong.setdefault(name, Fault(stated.place, text))
         return None
 
@@ -222,12 +232,14 @@ class _Walk:
         self.owner.wrong = before.wrong | self.owner.wrong
         return None
 
-    def _remember(self, *formulas: Formula) -> None:
+    def _memory(self, *formulas: Formula) -> dict[tuple[Place, Place], Seen]:
         """What each `previous` will ask for on the next date, read today."""
+        found, owner = {}, self.owner
         for part in self._previous_in(formulas):
-            owner, self.owner = self.owner, Seen()
+            self.owner = found[self.owner_place, part.place] = Seen()
             self._read(part.operand)
-            self.remembered[self.owner_place, part.place], self.owner = self.owner, owner
+        self.owner = owner
+        return found
 
     def _previous_in(self, formulas: tuple[Formula, ...]) -> list[Previous]:
         found = []
@@ -243,16 +255,18 @@ class _Walk:
         return f" on {self.occasion.day}" if self.occasion else ""
 
     def _not_stated(self, term: str, place: Place) -> None:
-        text = (f"the term '{term}' is missing: it is optional in '{self.contract.payoff.name}', but with these terms "
-                f"it is read{self._on} ({place})")
+        text = (f"the term '{term}' is missing: it is optional in '{self.contract.payoff.name}', but with "
+                f"these terms it is read{self._on} ({place})")
         self.owner.wrong.setdefault(term, Fault(self.contract.place, text))
 
     def _not_begun(self, running: Running, place: Place) -> None:
-        """A running value that is read before its first date: the fault of the dates that the contract gives it."""
+        """A running value that is read before its first date: the fault of the dates that the contract
+        gives it."""
         starts = [str(watch.start) for watch in self.dated.watches if watch.running.name == running.name]
         starts += [str(update.occasion.day) for moment in self.dated.moments for update in moment.updates
                    if update.running.name == running.name and update.first]
-        text = f"'{running.name}' is read{self._on} ({place}), but {f'begins on {starts[0]}' if starts else 'has no date'}"
+        begins = f"begins on {starts[0]}" if starts else "has no date"
+        text = f"'{running.name}' is read{self._on} ({place}), but {begins}"
         stated = self.contract.terms.get(running.at.name) if isinstance(running.at, At) else None
         self.owner.wrong.setdefault(running.name, Fault(stated.place if stated else running.place, text))
 

@@ -1,8 +1,8 @@
 """From dates as written to days: single dates, lists and rules, and terms that name other terms.
 
-Steps are counted from a rule's first date, not from the date before (so a rule from the 31st keeps to month ends),
-and each date is rolled by itself. Times of textbook contracts are exact fractions until the last moment, so that two
-ways of writing one time give one number.
+Steps are counted from a rule's first date, not from the date before (so a rule from the 31st keeps to month
+ends), and each date is rolled by itself. Times of textbook contracts are exact fractions until the last
+moment, so that two ways of writing one time give one number.
 """
 
 from __future__ import annotations
@@ -22,7 +22,8 @@ DAYS = {"day": 1, "week": 7}
 
 
 class WrongDates(Exception):
-    """A date term that gives no days. Never leaves this layer: it becomes a fault, or is one already (None)."""
+    """A date term that gives no days. Never leaves this layer: it becomes a fault, or is one already
+    (None)."""
 
     def __init__(self, place: Place | None = None, text: str = ""):
         self.fault = Fault(place, text) if place else None
@@ -32,7 +33,8 @@ class WrongDates(Exception):
 class TermDays:
     """The days of every date term of a contract, each worked out once.
 
-    `base` is the date from which times are counted, None for a textbook contract; `good` its good business days.
+    `base` is the date from which times are counted, None for a textbook contract; `good` its good business
+    days.
     """
 
     def __init__(self, contract: Contract, base: datetime.date | None, good: GoodDays | None):
@@ -129,12 +131,13 @@ class TermDays:
             dates.append(rolled)
             if until in (step, rolled):
                 return dates
-            if min(step, rolled) > until:
+            if step > until:
                 raise _misses(rule, dates, until)
             _check_count(dates, rule)
         raise _misses(rule, dates, until)
 
-    def _business_steps(self, rule: DayRule, start: datetime.date, until: datetime.date) -> list[datetime.date]:
+    def _business_steps(self, rule: DayRule, start: datetime.date,
+                        until: datetime.date) -> list[datetime.date]:
         """Every good day, or every few of them, between the two ends, both rolled."""
         dates, last = [self.good.rolled(start)], self.good.rolled(until)
         while dates[-1] < last:
@@ -172,12 +175,14 @@ def part_of(days: tuple, part: str) -> tuple:
 
 
 def _meant(day: Day) -> Fraction:
-    """A time as the fraction that was meant: a short decimal, or a multiple of a step such as 1/12 or 1/52."""
+    """A time as the fraction that was meant: a short decimal, or a multiple of a step such as 1/12 or
+    1/52."""
     return Fraction(day.time).limit_denominator(10**12)
 
 
 def _stepped(start: datetime.date, every: Period) -> Iterator[datetime.date]:
-    """The start, and each date a whole number of steps after it; the 31st becomes a shorter month's last day."""
+    """The start, and each date a whole number of steps after it; the 31st becomes a shorter month's last
+    day."""
     from dateutil.relativedelta import relativedelta
 
     for k in range(MOST_DATES + 1):
@@ -206,4 +211,4 @@ def _check_order(days: tuple[Day, ...], place: Place) -> None:
     for before, day in zip(days, days[1:], strict=False):
         if day.time <= before.time:
             raise WrongDates(place, f"two dates of the rule fall on {day}; for each business day write "
-                                    f"'every: 1 business day'")
+                                    "'every: 1 business day'")

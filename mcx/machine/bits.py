@@ -1,8 +1,8 @@
-"""Bit patterns of numbers inside vector loops, and each with a plain twin for runs without the compiler.
+"""Bit patterns of numbers inside vector loops; each has a plain twin for runs without the compiler.
 
-A `view` of the buffer that a loop also writes fails LLVM's alias check and the loop runs scalar; a bitcast in a
-register costs nothing. The mask of 64 comparisons finds rare lanes for 0.1 ns a lane where a loop with an `if` in it
-takes 1.2.
+A `view` of the buffer that a loop also writes fails LLVM's alias check and the loop runs scalar; a bitcast in
+a register costs nothing. The mask of 64 comparisons finds rare lanes for 0.1 ns a lane, where a loop with an
+`if` in it takes 1.2.
 """
 
 from __future__ import annotations

@@ -1,7 +1,10 @@
 """Drives the kernel over blocks of paths, on several threads, and sums what comes out.
 
-Sums are taken over fixed groups of 64 paths by a tree of pairs; `sums.py` merges them in order of path number. So no
-digit depends on how many lanes a block has, which thread ran it, or where a batch ended.
+Sums are taken over fixed groups of 64 paths by a tree of pairs; `sums.py` merges them in order of path
+number. So no digit depends on how many lanes a block has, which thread ran it, or where a batch ended.
+
+The threads are Python's: the kernel runs without the GIL, a thread that is busy with something else takes
+fewer pieces of a batch, and nothing is shared that a second run in the same process, or a fork, could upset.
 """
 
 from __future__ import annotations
@@ -30,8 +33,8 @@ def sweep(code, scalars, outputs, normals, uniforms, seed, stream, numbers, path
     registers  (rows + 1, more than lanes) float64 and words (4, lanes) int32: room to work
     means      (groups, outputs), written: the mean over each group
     squares    (groups, outputs), written: the sum of squares about that mean
-    bad        (groups,) int64, written: of the first value that is not finite, its path counted from the group's first,
-               times the outputs, plus its output; -1 if there is none
+    bad        (groups,) int64, written: path * outputs + output of the first value that is not finite, with
+               the path counted from the group's first; -1 if there is none
     values     (paths, outputs), written; or (0, outputs)
     """
     lanes, width = words.shape[1], outputs.shape[0]
@@ -59,10 +62,8 @@ def sweep(code, scalars, outputs, normals, uniforms, seed, stream, numbers, path
 
 @jit
 def _tree_sum(tree, x, centre, squared, count):
-    """The sum over the first `count` of 64 lanes of x - centre or its square, pair by pair, then pairs of pairs.
-
-    The tree fixes the order of the additions and still fills vector registers.
-    """
+    """The sum over the first `count` of 64 lanes of x - centre, or of its square, pair by pair, then pairs of
+    pairs: the tree fixes the order of the additions and still fills vector registers."""
     for i in range(32):
         a, b = x[i] - centre, x[i + 32] - centre
         a, b = a * a if squared else a, b * b if squared else b
@@ -86,7 +87,7 @@ def _first_bad(registers, outputs, start, count):
 
 
 class Crew:
-    """Threads, each with room to work, that run one kernel code. A context manager; not for two callers at once."""
+    """Threads, each with room to work, that run one kernel code; a context manager, for one caller."""
 
     def __init__(self, code: KernelCode, seed: int, stream: int, threads: int, lanes: int | None = None):
         self.code = code
@@ -103,8 +104,10 @@ class Crew:
         if self._pool:
             self._pool.shutdown()
 
-    def run(self, numbers: np.ndarray, values: np.ndarray | None = None) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-        """Means, squares and the first bad values of each group of the given path numbers, as `sweep` writes them.
+    def run(
+        self, numbers: np.ndarray, values: np.ndarray | None = None
+    ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Means, squares and first bad value of each group of the given path numbers, as `sweep` writes them.
 
         numbers (paths,) uint64; values (paths, outputs) float64 is filled if given.
         """
@@ -121,8 +124,8 @@ class Crew:
             written = np.empty((0, outputs)) if values is None else values[first:last]
             room = self._rooms.pop()
             sweep(self.code.code, self.code.scalars, self.code.outputs, *self._draws,
-                  padded[first : first + piece], last - first, *room, means[these], squares[these], bad[these],
-                  written)  # fmt: skip
+                  padded[first : first + piece], last - first, *room,
+                  means[these], squares[these], bad[these], written)  # fmt: skip
             self._rooms.append(room)
 
         firsts = range(0, paths, piece)
@@ -131,8 +134,9 @@ class Crew:
         return means, squares, bad
 
     def _room(self) -> tuple[np.ndarray, np.ndarray]:
-        """Registers and random words of one thread. Rows begin on cache lines, and are one line longer than the lanes:
-        with 512 lanes the same lane of all rows would else compete for the same few places of the cache."""
+        """Registers and random words of one thread. Rows begin on cache lines, and are one line longer than
+        the lanes: with 512 lanes the same lane of all rows would else compete for the same few places of the
+        cache."""
         stride = self.lanes + _CACHE_LINE
         raw = np.empty((self.code.rows + 1) * stride + _CACHE_LINE)
         start = -raw.ctypes.data // 8 % _CACHE_LINE

@@ -1,7 +1,8 @@
 """The draw stage: fills the first rows of the register file before the tape runs.
 
-Dimension d of a path is word d mod 4 of block d // 4. Bridge uniforms have blocks of their own, told by the highest
-bit, so that adding a normal moves no uniform. Whatever changes where normals come from changes this stage alone.
+Dimension d of a path is word d mod 4 of block d // 4. Bridge uniforms have blocks of their own, told by the
+highest bit, so that a normal more moves no uniform. Whatever changes where normals come from changes this
+stage alone.
 """
 
 from __future__ import annotations
@@ -19,7 +20,9 @@ _UNIFORM_BLOCKS = 1 << 31
 def fill_draws(registers, words, numbers, normals, uniforms, seed, stream):
     """Rows 0 .. normals-1: standard normals; the next `uniforms` rows: uniforms in (0, 1), 2^-32 apart.
 
-    registers (rows, at least lanes) float64, written; words (4, lanes) int32, room to work; numbers (lanes,) uint64.
+    registers  (rows, at least lanes) float64, written
+    words      (4, lanes) int32, room to work
+    numbers    (lanes,) uint64, path numbers
     """
     lanes = words.shape[1]
     for row in range(normals):

@@ -1,7 +1,7 @@
 """The kernel: interprets the code on one block of lanes, each instruction one loop that LLVM vectorises.
 
-Rows of one instruction are never the same (`prepare.py` sees to it), else the alias check would send the loop down
-its scalar branch. A form that is missing here would leave a row as it was: a test runs every one.
+No instruction writes a row that it reads (`prepare.py` sees to it), else the alias check would send the loop
+down its scalar branch. A form that is missing here would leave a row as it was: a test runs every one.
 """
 
 from __future__ import annotations
@@ -194,7 +194,7 @@ def _model(form, y, registers, scalars, a, b, c, d, lanes):
         x, m, s, z = registers[a], scalars[b], scalars[c], registers[d]
         for i in range(lanes):
             y[i] = x[i] + m + s * z[i]
-    elif form == Form.BRIDGE_LOW_RRSR:  # inversion of the law of a Brownian bridge's extreme; see tape/rules.py
+    elif form == Form.BRIDGE_LOW_RRSR:  # the law of a bridge's extreme, inverted: see tape/rules.py
         x0, x1, variance, log = registers[a], registers[b], scalars[c], registers[d]
         for i in range(lanes):
             move = x1[i] - x0[i]

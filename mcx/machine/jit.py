@@ -1,7 +1,8 @@
 """The one decorator of every kernel: flags, error model and the folder that holds the compiled code.
 
-numba's own cache watches a function's own file only: after renumbering an operation elsewhere it would silently run
-old code. So the folder is named by a hash of all sources that a kernel can see, of numba and of the processor.
+numba's cache watches a function's own file only: after renumbering an operation elsewhere it would silently
+run old code. So the folder is named by a hash of all sources that a kernel can see, of numba and of the
+processor.
 """
 
 from __future__ import annotations
@@ -17,13 +18,13 @@ import numba
 
 COMPILED = not numba.config.DISABLE_JIT
 
-# Contraction (a fused multiply-add) and no signed zeros are safe. Left out on purpose: 'nnan' and 'ninf', since NaN
-# and infinity must get through; 'reassoc', since it would change the order of sums.
+# Contraction (a fused multiply-add) and no signed zeros are safe. Left out on purpose: 'nnan' and 'ninf',
+# since NaN and infinity must get through; 'reassoc', since it would change the order of sums.
 _FLAGS = {"contract", "nsz"}
 
 
 def jit(function):
-    """Compile on first use, without the GIL, with numpy's division (a check for zero would stop vectorisation)."""
+    """Compile on first use, to run without the GIL; with numpy's division, since numba's is no vector loop."""
     if not COMPILED:
         return function
     # The folder is read when the cache is made, inside this call; other users of numba must not see ours.
@@ -44,7 +45,7 @@ def cache_folder() -> Path:
     """The folder of this version's kernels: under NUMBA_CACHE_DIR, else the user's cache directory, else a
     temporary folder of the user's own."""
     name = f"kernels-{_fingerprint()}"
-    base = numba.config.CACHE_DIR or os.environ.get("XDG_CACHE_HOME") or os.path.join(os.path.expanduser("~"), ".cache")
+    base = numba.config.CACHE_DIR or os.environ.get("XDG_CACHE_HOME") or os.path.expanduser("~/.cache")
     for parent in (Path(base, "mcx"), Path(tempfile.gettempdir(), f"mcx-{_user()}")):
         if _is_ours(parent / name):
             return parent / name
@@ -52,7 +53,7 @@ def cache_folder() -> Path:
 
 
 def _is_ours(folder: Path) -> bool:
-    """Whether the folder can be made, is writable, and belongs to the user: cached code is executed when read."""
+    """Whether the folder can be made and written to, and is the user's own: what is read from it is run."""
     try:
         folder.mkdir(mode=0o700, parents=True, exist_ok=True)
         with tempfile.TemporaryFile(dir=folder):
@@ -70,6 +71,6 @@ def _fingerprint() -> str:
     digest = hashlib.sha256()
     for source in (*sorted(here.glob("*.py")), here.parent / "tape" / "ops.py"):
         digest.update(source.read_bytes())
-    features = llvmlite.binding.get_host_cpu_features().flatten()
-    digest.update(f"{numba.__version__} {llvmlite.__version__} {llvmlite.binding.get_host_cpu_name()} {features}".encode())
+    processor = llvmlite.binding.get_host_cpu_name(), llvmlite.binding.get_host_cpu_features().flatten()
+    digest.update(repr((numba.__version__, llvmlite.__version__, *processor)).encode())
     return digest.hexdigest()[:16]

@@ -1,7 +1,7 @@
-"""The counter-based generator Philox4x32-10: the same path gets the same numbers whatever block or thread runs it.
+"""The counter-based generator Philox4x32-10: a path gets the same numbers whatever block or thread runs it.
 
-J. Salmon, M. Moraes, R. Dror, D. Shaw, "Parallel random numbers: as easy as 1, 2, 3", SC'11 (2011). The key is the
-64-bit seed; the counter is (path low, path high, block of four dimensions, stream).
+J. Salmon, M. Moraes, R. Dror, D. Shaw, "Parallel random numbers: as easy as 1, 2, 3", SC'11 (2011). The key
+is the 64-bit seed; the counter is (path low, path high, block of four dimensions, stream).
 """
 
 from __future__ import annotations
@@ -25,9 +25,9 @@ def fill_words(words, numbers, seed, block, stream):
     numbers  (lanes,) uint64: path numbers
     seed, block, stream: uint64, the last two below 2^32
 
-    The words of the state are kept in 64 bits with rubbish above bit 31, which a 32-bit multiplication ignores.
-    Two lanes half a row apart go through together: one chain of ten rounds would leave the multipliers waiting
-    (measured: 0.65 against 0.90 ns a word).
+    The state is kept in 64-bit words with rubbish above bit 31, which a multiplication of 32 bits ignores.
+    Two lanes half a row apart go through together: one chain of ten rounds would leave the multipliers
+    waiting (measured: 0.65 against 0.90 ns a word).
     """
     half = words.shape[1] >> 1
     halves = words.reshape((8, half))

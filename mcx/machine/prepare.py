@@ -1,7 +1,7 @@
 """From `Program` to the code that the kernel runs: one pass that picks a form for each instruction.
 
-On the way a drift and the step after it become one instruction, scalars are filled into a spare row where no form
-takes them, and no instruction is left that writes a row it reads.
+On the way a drift and the step after it become one instruction, scalars are filled into a spare row where no
+form takes them, and an instruction that would write a row it reads is given another to write.
 """
 
 from __future__ import annotations
@@ -24,7 +24,7 @@ _WHOLE_POWERS = range(-8, 9)  # x ** n by multiplications
 class KernelCode:
     """What the kernel reads.
 
-    code     (instructions, 6) int32: form, destination row, operands (rows or numbers of scalars, as the form says)
+    code     (instructions, 6) int32: form, destination row, operands (rows or scalars, as the form says)
     scalars  (scalars,) float64
     outputs  (outputs,) int32: the row of each output
     sums     how many sums the code takes
@@ -111,10 +111,10 @@ def _read_once(lines: Sequence[tuple[Op, int, tuple[int, ...]]], program: Progra
 
 
 class _Writer:
-    """Writes the kernel's code. Inside, an operand is a row of the register file or -1 - the number of a scalar.
+    """Writes the kernel's code. An operand here is a row of the register file or -1 - the number of a scalar.
 
-    `place` says where each of the program's rows is at the moment: an instruction whose result would go where one of
-    its operands stands writes the spare row instead, and the row it would have gone to becomes the spare one.
+    `place` says where each of the program's rows is at the moment: an instruction whose result would go where
+    one of its operands stands writes the spare row, and the row it would have gone to becomes the spare one.
     """
 
     def __init__(self, program: Program):
@@ -199,8 +199,9 @@ class _Writer:
         """Emit the form that takes these operands with the fewest scalars filled into rows."""
         scalars = {position for position, source in enumerate(sources) if source < 0}
         wanted = {form: {k for k, kind in enumerate(kinds(form)) if kind == "S"} for form in FORMS[op]}
-        form = min((form for form in wanted if wanted[form] <= scalars), key=lambda form: len(scalars - wanted[form]))
-        self.emit(form, to, *(self.filled(v) if k in scalars - wanted[form] else v for k, v in enumerate(sources)))
+        form = min((f for f in wanted if wanted[f] <= scalars), key=lambda f: len(scalars - wanted[f]))
+        filled = scalars - wanted[form]
+        self.emit(form, to, *[self.filled(v) if k in filled else v for k, v in enumerate(sources)])
 
     def emit(self, form: Form, to: int, *sources: int) -> None:
         slots = (source if source >= 0 else -1 - source for source in sources)

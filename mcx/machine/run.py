@@ -1,10 +1,10 @@
-"""Runs a program over many paths: batches, progress, interruption, snapshots; and over a few, path by path."""
+"""Runs a program over many paths, with progress, interruption and snapshots; and over a few, path by path."""
 
 from __future__ import annotations
 
 import os
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from enum import IntEnum
 
 import numpy as np
@@ -17,8 +17,8 @@ COMPILING = "compiling the kernels once for this machine, which takes about half
 
 
 class Stream(IntEnum):
-    """The last word of the generator's counter: runs of different streams share no number. Replicate r of a run is
-    stream REPLICATE + r."""
+    """The last word of the generator's counter: runs of different streams share no number. Replicate r of a
+    run is stream REPLICATE + r."""
 
     MAIN = 0
     PILOT = 1
@@ -46,7 +46,7 @@ class Snapshot:
 
 @dataclass(frozen=True, slots=True)
 class BlockSums(Snapshot):
-    """The result of a run. `snapshots` are what it had reached on the way; `interrupted`: not all paths were run."""
+    """The result of a run; `snapshots` are what it had reached on the way; `interrupted`: paths are missing."""
 
     snapshots: tuple[Snapshot, ...] = ()
     interrupted: bool = False
@@ -83,45 +83,47 @@ def run(
     """Mean and spread of every output over paths first_path .. first_path + paths - 1.
 
     seed        0 .. 2^64 - 1; with it, the stream and the path numbers every digit is fixed
-    threads     None: as many as the process may use; no digit depends on it, nor on `lanes` (a multiple of 64)
+    threads     None: all that the process may use; no digit depends on it, nor on `lanes`, a multiple of 64
     progress    called after each batch with the paths done and the mean and standard error of output 0
     snapshots   numbers of paths at which to note the sums; each is rounded up to a whole group of 64
     notice      called with a sentence if the kernels have to be compiled first
 
-    Raises NonFinitePath for the first path with an output that is not finite, and KeyboardInterrupt if that comes
-    before the first batch is done; later the sums so far are returned, marked as interrupted.
+    Raises NonFinitePath for the first path with an output that is not finite, and KeyboardInterrupt if that
+    comes before the first batch is done; later the sums so far are returned, marked as interrupted.
     """
+    if paths < 1:
+        raise ValueError(f"a run needs at least one path, not {paths}")
     code = prepare(program)
-    interrupted = False
+    reached: BlockSums | None = None  # replaced as a whole: an interruption cannot find it half made
     with _crew(code, seed, stream, threads, lanes, notice) as crew:
         from mcx.machine.sums import Totals
 
         totals = Totals(len(code.outputs), paths, snapshots)
         batch = batch_for(code, crew.lanes)
         try:
-            while totals.paths < paths:
-                first, count = first_path + totals.paths, min(batch, paths - totals.paths)
-                means, squares, bad = crew.run(np.arange(first, first + count, dtype=np.uint64))
-                _refuse_bad(bad, first, code, seed, stream)
+            for first in range(0, paths, batch):
+                count = min(batch, paths - first)
+                numbers = np.arange(first_path + first, first_path + first + count, dtype=np.uint64)
+                means, squares, bad = crew.run(numbers)
+                _refuse_bad(bad, first_path + first, code, seed, stream)
                 totals.add(count, means, squares)
+                noted = tuple(Snapshot(*sums) for sums in totals.noted)
+                reached = BlockSums(totals.paths, totals.mean, totals.squares, noted)
                 if progress:
-                    so_far = Snapshot(totals.paths, totals.mean, totals.squares)
-                    progress(so_far.paths, float(so_far.mean[0]), float(so_far.standard_error[0]))
+                    progress(reached.paths, float(reached.mean[0]), float(reached.standard_error[0]))
         except KeyboardInterrupt:
-            if not totals.paths:
+            if reached is None:
                 raise
-            interrupted = True
-    return BlockSums(
-        totals.paths, totals.mean, totals.squares, tuple(Snapshot(*noted) for noted in totals.noted), interrupted
-    )
+            return replace(reached, interrupted=reached.paths < paths)
+    return reached
 
 
 def levels(
     program: Program,
     *,
     seed: int,
-    stream: int,
     numbers: Sequence[int] | np.ndarray,
+    stream: int = Stream.MAIN,
     threads: int | None = None,
     lanes: int | None = None,
 ) -> np.ndarray:
@@ -141,7 +143,9 @@ def values_by_path(
     return levels(program, seed=seed, stream=stream, numbers=np.arange(paths), threads=threads).T
 
 
-def draws(program: Program, *, seed: int, stream: int, numbers: Sequence[int] | np.ndarray) -> np.ndarray:
+def draws(
+    program: Program, *, seed: int, numbers: Sequence[int] | np.ndarray, stream: int = Stream.MAIN
+) -> np.ndarray:
     """What the paths draw, normals first, then uniforms; shape (paths, draws)."""
     nothing = Program(
         code=np.empty((0, 6), dtype=np.int32),
@@ -159,7 +163,8 @@ def available_threads() -> int:
     return len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
 
 
-def _crew(code: KernelCode, seed: int, stream: int, threads: int | None, lanes: int | None, notice: Notice | None):
+def _crew(code: KernelCode, seed: int, stream: int, threads: int | None, lanes: int | None,
+          notice: Notice | None = None):
     """The crew of a run; numba is imported only now, and compiles only now."""
     from mcx.machine.jit import is_cold
 

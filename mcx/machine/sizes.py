@@ -1,7 +1,7 @@
 """How large the pieces of a run are, and what a path costs.
 
-Costs come from a fixed table, since nothing that a result depends on may depend on the clock: nanoseconds for one
-lane, as benchmarks/kernel.py measured them on one core with 256-bit vectors at about 2.5 GHz. Only ratios matter.
+Costs come from a fixed table, since nothing that a result depends on may depend on the clock: nanoseconds for
+one lane, measured on one core with 256-bit vectors (benchmarks/kernel.py). Only ratios matter.
 """
 
 from __future__ import annotations
@@ -32,7 +32,7 @@ _BY_FORM = np.array([_DEAR.get(form, _USUAL) for form in Form])
 
 _BATCH = 1 << 17  # paths between two reports of progress,
 _BATCH_TIME = 2.5e8  # unless they take longer than this on one core: an interruption must be prompt
-_CACHE = 1 << 18  # bytes of a register file: half the second-level cache of a small core
+_CACHE = 3 << 16  # bytes of a register file: with room to spare in a second-level cache of 512 KB
 
 
 def nanoseconds(code: KernelCode) -> float:
@@ -53,5 +53,5 @@ def batch_for(code: KernelCode, lanes: int) -> int:
 
 
 def lanes_for(rows: int) -> int:
-    """How many paths a block has: its register file stays in the second-level cache; a multiple of 64 up to 1024."""
+    """How many paths a block has: its register file stays in the second-level cache; a multiple of 64."""
     return min(max(_CACHE // (8 * rows) // GROUP * GROUP, GROUP), 1024)

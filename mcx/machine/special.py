@@ -1,8 +1,9 @@
 """Exponential, logarithm and inverse normal in plain arithmetic, so that LLVM makes vector loops of them.
 
-`math.exp` in a loop is a scalar call (4 ns a lane against 1). Each function here is a loop without branches for the
-usual arguments and a second one, rarely run, for the rest. Rows are float64 arrays of the same length, the result
-never in the buffer of the argument. Polynomials were fitted for this file by Remez' exchange in 50 digits.
+`math.exp` in a loop is a scalar call (4 ns a lane against 1). Each function here is a loop without branches
+for the usual arguments and a second one, rarely run, for the rest. Rows are float64, at least `lanes` long;
+the result never goes where the argument stands. Polynomials were fitted for this file by Remez' exchange in
+50 digits.
 """
 
 from __future__ import annotations
@@ -16,10 +17,10 @@ from mcx.machine.jit import jit
 _ROUNDER = 6755399441055744.0
 _MANTISSA = np.uint64(52)
 _LOG2_E = 1.4426950408889634
-_LN2_HIGH, _LN2_LOW = 6.93147180369123816490e-01, 1.90821492927058770002e-10  # the first has 21 zeros at its end
+_LN2_HIGH, _LN2_LOW = 6.93147180369123816490e-01, 1.90821492927058770002e-10  # the first ends in 21 zero bits
 _EXP_USUAL = 708.0
-# Whether any lane is out of the usual range is read off the sign of integers, which costs less than a comparison: bit
-# patterns of positive numbers have their order, and those of infinity and NaN lie above.
+# Whether any lane is out of the usual range is read off the sign of integers, which costs less than a
+# comparison: bit patterns of positive numbers have their order, and those of infinity and NaN lie above.
 _EXP_USUAL_BITS = np.float64(_EXP_USUAL).view(np.int64)
 _MAGNITUDE = np.int64(2**63 - 1)
 _ZERO = np.int64(0)
@@ -53,7 +54,8 @@ def exp_row(y, x, lanes):
                 y[i] = np.exp(x[i])
 
 
-# With s = f / (2 + f): log(1 + f) = 2 s + s^3 (B0 + B1 s^2 + ...), relative error below 1e-17 for |f| up to sqrt(2) - 1
+# With s = f / (2 + f): log(1 + f) = 2 s + s^3 (B0 + B1 s^2 + ...), to 1e-17 for f from 1 / sqrt(2) - 1 to
+# sqrt(2) - 1
 _B0, _B1, _B2 = 0.66666666666667333758, 0.39999999999477622411, 0.28571428721946341119
 _B3, _B4 = 0.22222200992543244733, 0.18183428077000566684
 _B5, _B6 = 0.15317767131165016777, 0.14756388685995405375
@@ -90,8 +92,9 @@ def log_row(y, x, lanes):
 
 
 # The inverse normal of u = (1 + s) / 2 is s P(t) / Q(t), t = 1 - s^2 = 4 u (1 - u), to 8e-14 for t >= 0.01. A
-# rational function of t without its logarithm is half the work of a polynomial in -log t (M. Giles, "Approximating
-# the erfinv function", 2011; measured 1.8 against 4.3 ns), at the price of 0.5 % of the draws left for the tail.
+# rational function of t itself is less than half the work of a polynomial in -log t (M. Giles, "Approximating
+# the erfinv function", 2011; measured 1.8 against 4.3 ns), at the price of 0.5 % of the draws left for the
+# tail.
 _P0, _P1, _P2 = 3.360603381385715371751e-11, 5.530244853530309383385e-08, 1.820744959760474465326e-05
 _P3, _P4, _P5 = 0.001980085571459185961068, 0.08620603607175353187053, 1.639752345022622508324
 _P6, _P7, _P8 = 14.09128536603988103654, 54.38767190478729381869, 89.87721930359226508215
@@ -107,7 +110,7 @@ _ONE = np.uint64(1)
 
 @jit
 def normal_row(z, words, lanes):
-    """z = the normal whose distribution function is (k + 1/2) / 2^32, from words k - 2^31 (int32); lanes: times 64."""
+    """z = the inverse normal of (k + 1/2) / 2^32, from words k - 2^31 (int32); lanes: a multiple of 64."""
     for i in range(lanes):
         s = (words[i] + 0.5) * 2.0**-31
         t = 1.0 - s * s
@@ -127,14 +130,16 @@ def normal_row(z, words, lanes):
 
 @jit
 def _tail_normal(word):
-    """The inverse normal in the tail, to 1e-15: M. Wichura, "Algorithm AS 241", Applied Statistics 37 (1988), 477-484,
-    the branch in r = sqrt(-log(probability)), which holds to r = 5 (a word of 32 bits ends at 4.8)."""
+    """The inverse normal in the tail, to 1e-15: M. Wichura, "Algorithm AS 241", Applied Statistics 37 (1988),
+    477-484, the branch in r = sqrt(-log(probability)) that holds to r = 5; a word of 32 bits ends at 4.8."""
     s = (word + 0.5) * 2.0**-31
     r = np.sqrt(-np.log(0.5 - 0.5 * abs(s))) - 1.6
     p = 2.27238449892691845833e-2 + r * 7.74545014278341407640e-4
     p = 1.27045825245236838258 + r * (2.41780725177450611770e-1 + r * p)
-    p = 1.42343711074968357734 + r * (4.63033784615654529590 + r * (5.76949722146069140550 + r * (3.64784832476320460504 + r * p)))
+    p = 5.76949722146069140550 + r * (3.64784832476320460504 + r * p)
+    p = 1.42343711074968357734 + r * (4.63033784615654529590 + r * p)
     q = 5.47593808499534494600e-4 + r * 1.05075007164441684324e-9
     q = 1.48103976427480074590e-1 + r * (1.51986665636164571966e-2 + r * q)
-    q = 1.0 + r * (2.05319162663775882187 + r * (1.67638483018380384940 + r * (6.89767334985100004550e-1 + r * q)))
+    q = 1.67638483018380384940 + r * (6.89767334985100004550e-1 + r * q)
+    q = 1.0 + r * (2.05319162663775882187 + r * q)
     return p / q if s > 0.0 else -p / q

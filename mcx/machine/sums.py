@@ -12,11 +12,13 @@ from mcx.machine.sizes import GROUP
 
 @jit
 def merge(totals, done, paths, means, squares):
-    """Merge groups into running totals, in order: means and squares, each (groups, outputs), of `paths` paths together.
+    """Merge groups into running totals, in order: means and squares, each (groups, outputs), of `paths`
+    paths.
 
-    totals (outputs, 4) float64: the mean and what its additions lost, the sum of squares about it and what its
-    additions lost (A. Neumaier, 1974). `done` paths are in them already. The rule for joining two samples is that of
-    T. Chan, G. Golub and R. LeVeque, "Updating formulae and a pairwise algorithm for computing sample variances" (1979).
+    totals (outputs, 4) float64: the mean and what its additions lost, the sum of squares about it and what
+    its additions lost (A. Neumaier, 1974). `done` paths are in them already. The rule for joining two
+    samples: T. Chan, G. Golub, R. LeVeque, "Updating formulae and a pairwise algorithm for computing sample
+    variances" (1979).
     """
     for group in range(means.shape[0]):
         count = min(GROUP, paths - group * GROUP)

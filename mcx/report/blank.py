@@ -14,6 +14,7 @@ from mcx.report.settled import right_sides
 from mcx.report.wording import figure
 
 WIDTH = 34  # where the words about a blank begin
+LATER = "# A quote to fill in comes with the version that explains quotes."
 BOUNDS = (("above", "above"), ("below", "below"), ("at_least", "at least"), ("at_most", "at most"))
 WRITTEN = {
     "number": "a number",
@@ -28,7 +29,7 @@ WRITTEN = {
 
 def blank(payoff: Payoff, assets: Sequence[str]) -> str:
     """The two documents as YAML text."""
-    return "\n".join((*_contract(payoff, assets), "---", *_market(assets))) + "\n"
+    return "\n".join((*_contract(payoff, assets), "---", *_market(assets), LATER)) + "\n"
 
 
 def _line(key: str, value: str = "", about: str = "", indent: int = 0) -> str:
@@ -87,7 +88,7 @@ def _about(term: Term) -> str:
         written += f"; one for each of {term.per}"
     bounds = [f"{word} {figure(getattr(term, key), term.type)}" for key, word in BOUNDS if getattr(term, key) is not None]
     listed = ", ".join((written, *bounds))
-    return f"{term.about}: {listed}" if term.about else listed
+    return f"{term.about} ({listed})" if term.about else listed
 
 
 def _market(assets: Sequence[str]) -> Iterator[str]:

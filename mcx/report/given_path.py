@@ -7,6 +7,7 @@ a leg is what it pays on that day.
 
 from __future__ import annotations
 
+import datetime
 from collections.abc import Iterable, Mapping
 from dataclasses import replace
 
@@ -38,16 +39,17 @@ def run_levels(
     reader = _Reader(dated, levels)
     wanted = {(step.op, step.payload): None for step in tape.instructions if isinstance(step.payload, LevelKey)}
     read = {(op, key): reader.level(op, key) for op, key in wanted}
-    if reader.missing:
-        return None, reader.faults(file)
     due = tuple(leaf for leaf in tape.leaves if leaf.kind is LeafKind.DISCOUNT)
     values = interpret(tape, [_leaf(leaf, due, dated) for leaf in tape.leaves], levels=read)
     found = {name: np.broadcast_to(value, (max(len(due), 1),)) for name, value in outputs(tape, values).items()}
-    return _result(dated, tape, found, due, reader.notes()), []
+    ended = next((output.day for output in tape.outputs if output.kind == "end" and found[output.name][0]), "")
+    if reader.missing_before(ended):
+        return None, reader.faults(file)
+    return _result(dated, tape, found, due, ended, reader.notes(ended)), []
 
 
 class _Reader:
-    """Looks up levels by the tape's keys and remembers what was not given."""
+    """Looks up levels by the tape's keys; remembers what was not given (and reads as NaN) and what was used."""
 
     def __init__(self, dated: DatedContract, levels: Mapping[str, Mapping[Day, float]]):
         self.dated = dated
@@ -56,22 +58,32 @@ class _Reader:
             for number, asset in enumerate(dated.contract.assets)
         }
         self.missing: dict[int, set[float]] = {}
+        self.used: set[tuple[int, float]] = set()
         self.watched: dict[tuple[int, float], float] = {}  # asset, start -> end
 
     def level(self, op: Op, key: LevelKey) -> float:
         """The level that a key reads: on its day, or the extreme of all that are given within its stretch."""
-        found = [level for time, level in self.given[key.asset]
-                 if (key.start if op is not Op.LEVEL else key.time) - SAME_TIME <= time <= key.time + SAME_TIME]
-        ends = (key.time,) if op is Op.LEVEL else (key.start, key.time)
-        if op is not Op.LEVEL:
-            self.watched[key.asset, key.start] = max(key.time, self.watched.get((key.asset, key.start), 0.0))
-        times = [time for time, _ in self.given[key.asset]]
-        for end in ends:
-            if not any(abs(time - end) <= SAME_TIME for time in times):
+        start = key.time if op is Op.LEVEL else key.start
+        found = [(time, level) for time, level in self.given[key.asset]
+                 if start - SAME_TIME <= time <= key.time + SAME_TIME]
+        self.used |= {(key.asset, time) for time, _ in found}
+        for end in {start, key.time}:
+            if not any(abs(time - end) <= SAME_TIME for time, _ in found):
                 self.missing.setdefault(key.asset, set()).add(end)
+        if op is not Op.LEVEL:
+            self.watched[key.asset, start] = max(key.time, self.watched.get((key.asset, start), 0.0))
         if not found:
             return np.nan
-        return {Op.LEVEL: found[-1], Op.LOW: min(found), Op.HIGH: max(found)}[op]
+        return {Op.LEVEL: max, Op.LOW: min, Op.HIGH: max}[op](level for _, level in found)
+
+    def missing_before(self, ended: str) -> bool:
+        """Whether a level is missing that counts: after the contract has ended none does.
+
+        What is missing reads as NaN, which turns no condition true, so an end before the first such date is sound.
+        """
+        first = min((time for times in self.missing.values() for time in times), default=np.inf)
+        days = {str(moment.day): moment.day.time for moment in self.dated.moments}
+        return first <= days.get(ended, np.inf) and first < np.inf
 
     def faults(self, file: str) -> list[Fault]:
         """One fault for each asset, with every date that has no level."""
@@ -82,25 +94,35 @@ class _Reader:
             for asset, times in sorted(self.missing.items())
         ]
 
-    def notes(self) -> tuple[str, ...]:
+    def notes(self, ended: str) -> tuple[str, ...]:
+        """How the levels were taken."""
         names = self.dated.contract.assets
         stretches: dict[int, tuple[float, float]] = {}
         for (asset, start), end in self.watched.items():
             before = stretches.get(asset, (start, end))
             stretches[asset] = min(before[0], start), max(before[1], end)
-        return tuple(CONTINUOUS.format(names[asset], *self._days(ends)) for asset, ends in sorted(stretches.items()))
+        said = [CONTINUOUS.format(names[asset], *self._days(ends)) for asset, ends in sorted(stretches.items())]
+        if self.missing:
+            said.append(f"the contract ended on {ended}; later dates without levels are left out")
+        for asset, given in self.given.items():
+            unused = [time for time, _ in given if (asset, time) not in self.used]
+            if unused:
+                said.append(f"not looked at: {names[asset]} on {joined(self._days(unused))}")
+        return tuple(said)
 
     def _days(self, times: Iterable[float]) -> list[str]:
         return [day_of(time, self.dated) for time in sorted(times)]
 
 
 def day_of(time: float, dated: DatedContract) -> str:
-    """The contract's day at a time on its tape."""
+    """The day at a time in years: the contract's own, else counted from the nearest of them."""
     known = [moment.day for moment in dated.moments]
     known += [day for watch in dated.watches for day in (watch.start, watch.end)]
     known += [due for moment in dated.moments for event in moment.events for due in event.due.values()]
     near = min(known, key=lambda day: abs(day.time - time))
-    return str(near if abs(near.time - time) <= SAME_TIME else Day(time))
+    if abs(near.time - time) <= SAME_TIME or near.date is None:
+        return str(near if abs(near.time - time) <= SAME_TIME else Day(time))
+    return str(near.date + datetime.timedelta(days=round((time - near.time) * 365)))
 
 
 def _leaf(leaf: Leaf, due: tuple[Leaf, ...], dated: DatedContract) -> float | np.ndarray:
@@ -109,7 +131,9 @@ def _leaf(leaf: Leaf, due: tuple[Leaf, ...], dated: DatedContract) -> float | np
     return figure(dated.contract, leaf)
 
 
-def _result(dated: DatedContract, tape: Tape, found: dict, due: tuple[Leaf, ...], notes: tuple[str, ...]) -> PathResult:
+def _result(
+    dated: DatedContract, tape: Tape, found: dict, due: tuple[Leaf, ...], ended: str, notes: tuple[str, ...]
+) -> PathResult:
     size = dated.contract.size
     payments = [
         Payment(day_of(leaf.end, dated), output.subject, float(found[output.name][lane]),
@@ -123,11 +147,10 @@ def _result(dated: DatedContract, tape: Tape, found: dict, due: tuple[Leaf, ...]
     for output in tape.outputs:
         if output.kind == "condition" and output.day and found[output.name][0]:
             dates[output.subject].append(output.day)
-    ended = [output.day for output in tape.outputs if output.kind == "end" and found[output.name][0]]
     return PathResult(
         payments=tuple(payments),
         total=sum(payment.amount for payment in payments),
         conditions=tuple(Met(each.subject, bool(found[each.name][0]), tuple(dates[each.subject])) for each in held),
-        ended=ended[0] if ended else "",
+        ended=ended,
         notes=notes,
     )

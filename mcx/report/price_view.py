@@ -137,7 +137,8 @@ def _checks(result: PriceResult, scale: Scale, page: Page) -> None:
 def show_prices(table: PriceTable, page: Page) -> None:
     """Several contracts: one line each, then what is particular to some, then what holds for all."""
     page.table(("contract", "", "price", "± 95 %", "currency", "value"), map(_row, table.prices), words=2)
-    page.line("± is the half-width of the 95 % interval, sampling error only")
+    page.line("± is the half-width of the 95 % interval, sampling error only; legs, probabilities and checks: one contract "
+              "at a time, or --json")
     first = table.prices[0]
     page.named((
         ("valued on", first.valuation or "time 0"),

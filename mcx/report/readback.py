@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 from mcx.checked.contract import Figures
+from mcx.checked.formula import Number
 from mcx.checked.market import Market
 from mcx.checked.payoff import Assign, Continuous, Pay, Running
 from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Occasion, Watch
@@ -89,9 +90,11 @@ def _running(running: Running, dated: DatedContract, words: Words, settled: Sett
     first = words.formula(start) if given else ""
     if running.how == "set":
         return f"starts at {first}; events change it"
-    what = HOW[running.how].format(words.formula(settled.formula(running.formula)))
-    if running.how == "total" and running.formula.kind.is_flag:
-        what = f"how often {words.formula(settled.formula(running.formula))}"
+    formula = settled.formula(running.formula)
+    what = HOW[running.how].format(words.formula(formula))
+    if running.how == "total" and (formula.kind.is_flag or isinstance(formula, Number)):
+        what = f"how often {words.formula(formula)}" if formula.kind.is_flag else \
+            f"{words.formula(formula)} for each date"
     earlier = f"; {first} counts as an earlier value" if given else ""
     return f"{what}, so far, {_when(running, dated)}{earlier}"
 

@@ -71,7 +71,7 @@ class Watched:
     until: float = 0.0
 
     def read(self, asker: Name, time: float) -> Values:
-        running, builder = self.watch.running, self.formulas.builder
+        running = self.watch.running
         if time < self.watch.start.time:
             if self.start is None:
                 raise Unreadable(asker.place, f"'{running.name}' is read before its first date")

@@ -30,7 +30,8 @@ def test_rounding_is_forgiven():
 
 @given(st.integers(3, 7), st.integers(0, 2**32))
 def test_the_nearest_stays_valid_when_it_is_printed(size: int, seed: int):
-    """Rounded to six decimals, as it is printed, the nearest matrix passes the test that its original failed."""
+    """Rounded to six decimals, as it is printed, the nearest matrix passes the test that its original
+    failed."""
     rows = np.random.default_rng(seed).uniform(-1, 1, (size, size))
     rows = np.tril(rows, -1) + np.tril(rows, -1).T + np.eye(size)
     printed = np.round(nearest_correlation(rows), 6)

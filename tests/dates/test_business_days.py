@@ -20,10 +20,11 @@ def good(roll: str = "following", name: str = "ECB") -> GoodDays:
     return found
 
 
-@pytest.mark.parametrize("bad", ["2027-01-01", "2027-03-26", "2027-03-29", "2026-05-01", "2026-12-25", "2028-12-26"])
+@pytest.mark.parametrize("bad",
+                         ["2027-01-01", "2027-03-26", "2027-03-29", "2026-05-01", "2026-12-25", "2028-12-26"])
 def test_ecb_closing_days(bad: str):
-    """The ECB closes on New Year's Day, Good Friday, Easter Monday, 1 May and 25 and 26 December (its press release of
-    14 December 2000 on the long-term calendar, from memory)."""
+    """The ECB closes on New Year's Day, Good Friday, Easter Monday, 1 May and 25 and 26 December (its
+    press release of 14 December 2000 on the long-term calendar, from memory)."""
     assert not good().is_good(date.fromisoformat(bad))
 
 
@@ -47,7 +48,8 @@ def test_ecb_open_days(open_day: str):
     ],
 )
 def test_rolls(roll: str, bad: str, rolled: str):
-    """Each convention moves a bad day its own way (2006 ISDA Definitions, section 4.12) and leaves good days alone."""
+    """Each convention moves a bad day its own way (2006 ISDA Definitions, section 4.12) and leaves good
+    days alone."""
     assert good(roll).rolled(date.fromisoformat(bad)) == date.fromisoformat(rolled)
 
 
@@ -78,7 +80,8 @@ def test_unknown_list_is_a_fault_with_a_near_name():
     """A name that the package does not know is a fault at its place."""
     found, faults = good_days(BusinessDays("XNYSE", "following", PLACE))
     assert found is None
-    assert [str(fault) for fault in faults] == ["note.yaml:9:23: there are no holidays 'XNYSE'; did you mean 'XNYS'?"]
+    assert [str(fault) for fault in faults] == ["note.yaml:9:23: there are no holidays 'XNYSE'; did you mean "
+                                                "'XNYS'?"]
     _, faults = good_days(BusinessDays("weekends", "following", PLACE))
     assert "expected 'none' (weekends only)" in faults[0].text
 

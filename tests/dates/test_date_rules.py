@@ -1,4 +1,5 @@
-"""Date rules: steps from the first date, month ends, leap days, rolling, and rules that do not end where they say."""
+"""Date rules: steps from the first date, month ends, leap days, rolling, and rules that do not end where
+they say."""
 
 from __future__ import annotations
 
@@ -16,10 +17,12 @@ from mcx.faults import Place
 PLACE, UNTIL = Place("note.yaml", 12, 17), Place("note.yaml", 12, 43)
 
 
-def days_of(value: TermValue, holidays: str = "none", roll: str = "modified following", textbook: bool = False,
+def days_of(value: TermValue, holidays: str = "none", roll: str = "modified following",
+            textbook: bool = False,
             **others: TermValue) -> list[str]:
     """The days of a term, as text, or the faults."""
-    contract = Contract("test", "EUR", ("harbour",), None, {"days": value, **others}, PLACE, textbook=textbook)
+    contract = Contract("test", "EUR", ("harbour",), None, {"days": value, **others}, PLACE,
+                        textbook=textbook)
     good, _ = good_days(BusinessDays(holidays, roll, PLACE))
     terms = TermDays(contract, None if textbook else date(2026, 12, 1), None if textbook else good)
     days = terms.of_term("days")
@@ -37,7 +40,8 @@ def rule(start: str, until: str, count: int, unit: str) -> DayRule:
 
 
 def test_month_ends_are_counted_from_the_first_date():
-    """From the 31st, each date is the 31st or its month's last day: February does not pull the later ones down."""
+    """From the 31st, each date is the 31st or its month's last day: February does not pull the later ones
+    down."""
     assert days_of(rule("2027-01-31", "2027-05-31", 1, "month"), roll="preceding") == [
         "2027-01-29", "2027-02-26", "2027-03-31", "2027-04-30", "2027-05-31"]
 
@@ -67,21 +71,24 @@ def test_until_rolled_or_not(until: str):
 
 
 def test_rule_that_misses_its_end_prints_its_dates():
-    """A rule that steps over its `until` is a fault at `until` that shows the first and last dates it gives."""
+    """A rule that steps over its `until` is a fault at `until` that shows the first and last dates it
+    gives."""
     assert days_of(rule("2027-02-16", "2029-11-15", 3, "month")) == [
-        "note.yaml:12:43: the steps do not end on 2029-11-15: they give 2027-02-16, 2027-05-17, ..., 2029-08-16, "
-        "2029-11-16"]
+        "note.yaml:12:43: the steps do not end on 2029-11-15: they give 2027-02-16, 2027-05-17, ..., "
+        "2029-08-16, 2029-11-16"]
 
 
 def test_each_business_day():
-    """`1 business day` gives every good day between the two, both included if good: Easter 2027 leaves out four."""
+    """`1 business day` gives every good day between the two, both included if good: Easter 2027 leaves out
+    four."""
     assert days_of(rule("2027-03-25", "2027-04-01", 1, "business day"), "ECB") == [
         "2027-03-25", "2027-03-30", "2027-03-31", "2027-04-01"]
 
 
 def test_every_few_business_days_must_end():
     """Steps of several business days end on `until` or are at fault."""
-    assert days_of(rule("2027-03-01", "2027-03-11", 4, "business day")) == ["2027-03-01", "2027-03-05", "2027-03-11"]
+    assert days_of(rule("2027-03-01", "2027-03-11", 4, "business day")) == ["2027-03-01", "2027-03-05",
+                                                                            "2027-03-11"]
     assert "do not end on 2027-03-10" in days_of(rule("2027-03-01", "2027-03-10", 4, "business day"))[0]
 
 
@@ -93,7 +100,8 @@ def test_weeks():
 def test_days_that_roll_together_are_refused():
     """`every: 1 day` puts a weekend on its Monday, twice: the fault says what was meant."""
     assert days_of(rule("2027-02-05", "2027-02-09", 1, "day")) == [
-        "note.yaml:12:17: two dates of the rule fall on 2027-02-08; for each business day write 'every: 1 business day'"]
+        "note.yaml:12:17: two dates of the rule fall on 2027-02-08; for each business day write 'every: 1 "
+        "business day'"]
 
 
 def test_end_before_start():
@@ -118,7 +126,8 @@ def test_rules_without_end_are_bounded(start: str, until: str, count: int, unit:
 
 
 def test_lists_keep_order():
-    """Listed dates are rolled; the same day twice, or an earlier one after a later one, is a fault at that date."""
+    """Listed dates are rolled; the same day twice, or an earlier one after a later one, is a fault at that
+    date."""
     second = Place("note.yaml", 12, 30)
     assert days_of(DayList(PLACE, (day("2027-02-06"), day("2027-02-10")))) == ["2027-02-08", "2027-02-10"]
     assert days_of(DayList(PLACE, (day("2027-02-06"), day("2027-02-08", second)))) == [
@@ -131,10 +140,12 @@ def test_names_of_other_terms():
     """A date may be the first or last date of another term, and dates may be all or some of another's."""
     months = rule("2027-02-01", "2027-04-01", 1, "month")
     for part, expected in [("", ["2027-02-01", "2027-03-01", "2027-04-01"]), ("last", ["2027-04-01"]),
-                           ("but_first", ["2027-03-01", "2027-04-01"]), ("but_last", ["2027-02-01", "2027-03-01"])]:
+                           ("but_first", ["2027-03-01", "2027-04-01"]),
+                           ("but_last", ["2027-02-01", "2027-03-01"])]:
         assert days_of(DayList(PLACE, (DayRef(PLACE, term="months", part=part),)), months=months) == expected
     assert days_of(DayRef(PLACE, term="months", part="last"), months=months) == ["2027-04-01"]
-    daily = DayRule(PLACE, DayRef(UNTIL, term="months", part="last"), day("2027-03-30"), Period(1, "business day"))
+    daily = DayRule(PLACE, DayRef(UNTIL, term="months", part="last"), day("2027-03-30"),
+                    Period(1, "business day"))
     assert days_of(daily, months=months) == ["2027-03-30", "2027-03-31", "2027-04-01"]
 
 
@@ -153,11 +164,13 @@ def test_stretch():
 
 def textbook(until: str, start: str = "", count: int | None = None, months: int = 0) -> list[str]:
     every = Period(months, "month") if months else None
-    return days_of(DayRule(PLACE, day(until, UNTIL), day(start) if start else None, every, count), textbook=True)
+    return days_of(DayRule(PLACE, day(until, UNTIL), day(start) if start else None, every, count),
+                   textbook=True)
 
 
 def test_equal_steps():
-    """Equal steps end at `until` and leave out the start unless it is stated; times of one value are one number."""
+    """Equal steps end at `until` and leave out the start unless it is stated; times of one value are one
+    number."""
     assert textbook("1y", count=4) == ["0.25y", "0.5y", "0.75y", "1y"]
     assert textbook("1y", "0y", count=2) == ["0y", "0.5y", "1y"]
     weeks = Contract("test", "EUR", ("harbour",), None, {
@@ -182,7 +195,8 @@ def test_times_need_room():
 @given(st.dates(date(2026, 1, 1), date(2060, 1, 1)), st.integers(1, 40), st.integers(1, 12),
        st.sampled_from(["following", "modified following", "preceding"]))
 def test_every_rule_of_months_ends(start: date, count: int, step: int, roll: str):
-    """A rule of months whose `until` is counted by hand gives its number of dates, each within a week of its day."""
+    """A rule of months whose `until` is counted by hand gives its number of dates, each within a week of
+    its day."""
     total = start.month - 1 + (count - 1) * step
     last = next(date(start.year + total // 12, total % 12 + 1, number) for number in range(start.day, 27, -1)
                 if _exists(start.year + total // 12, total % 12 + 1, number)) if start.day > 28 else \

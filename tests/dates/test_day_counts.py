@@ -9,7 +9,8 @@ import pytest
 from mcx.checked.read_contract import DAY_COUNTS
 from mcx.dates.day_counts import YEAR_FRACTIONS
 
-# ISDA (1998), EMU and Market Conventions: Recent Developments, actual/actual examples, ISDA method; from memory.
+# ISDA (1998), EMU and Market Conventions: Recent Developments, actual/actual examples, ISDA method; from
+# memory.
 ACTUAL_ACTUAL = [
     ("2003-11-01", "2004-05-01", 61 / 365 + 121 / 366),
     ("1999-02-01", "1999-07-01", 150 / 365),

@@ -32,9 +32,9 @@ class Case:
 
     @property
     def slack(self) -> float:
-        """How far the printed value may be from the exact one: half a unit of its last good digit, one and a half
-        where the printed last digit is known to be one off."""
-        return (1.5 if self.agreement == "last digit" else 0.5) * 10.0**-self.digits
+        """How far the printed value may be from the recomputed one: half a unit of its last good digit, one and a
+        half where the printed last digit is known to be one off, and the rounding of the recomputation itself."""
+        return (1.5 if self.agreement == "last digit" else 0.5) * 10.0**-self.digits + 5e-12 * abs(self.recomputed)
 
 
 @cache

@@ -92,7 +92,7 @@ def test_aliases_stand_for_their_node():
         ("a: !foo 3\n", "1:4: the tag '!foo' is not read; write the plain value"),
         ("<<: {a: 1}\n", "1:1: the merge key '<<' is not read; write the keys out"),
         ("? [a]\n: b\n", "1:3: a key must be a single word, not a list or a mapping"),
-        ("? \n: b\n", "1:3: a key is missing before ':'"),
+        ("? \n: b\n", "1:2: a key is missing before ':'"),
         ("a: *x\n", "1:4: '*x' names nothing; expected '&x' at a value above"),
         ("a: &x [*x]\n", "1:8: '*x' stands inside the value that it names"),
         ("%YAML 1.1\n---\na: 1\n", "1:1: '%YAML 1.1' is not read; this file is read as YAML 1.2"),

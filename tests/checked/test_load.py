@@ -1,0 +1,292 @@
+"""From files to a request: which documents there are, what they say of each other, and all faults at once."""
+
+from __future__ import annotations
+
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+
+from mcx.checked.library import Definitions, shipped_names, shipped_text
+from mcx.checked.load import NO_FUNDING, Request, checked_request, load, request
+from mcx.dates.dating import date_contract
+from mcx.faults import InputError
+from mcx.text.documents import parse_documents
+
+EXAMPLES = sorted((Path(__file__).parents[2] / "payoffs" / "examples").glob("*.yaml"))
+EXAMPLE_TEXTS = [file.read_text(encoding="utf-8") for file in EXAMPLES]
+CONTRACT = """\
+contract: Worst-of put
+currency: EUR
+notional: 2000000
+assets: [harbour, quarry, orchard]
+start: 2026-12-01
+settlement: 2 business days
+calendar: {holidays: ECB, roll: modified following}
+payoff: rainbow_option
+terms:
+  side: put
+  which: worst
+  initial: 100
+  strike: 90%
+  expiry: 2027-12-01
+"""
+MARKET = """\
+market: 2026-12-01
+rates: {EUR: 2.1%}
+funding: {EUR: 0 bp}
+assets:
+  harbour: {spot: 100, currency: EUR, yield: 2.4%, vol: 18%}
+  quarry: {spot: 100, currency: EUR, yield: 3.1%, vol: 27%}
+  orchard: {spot: 100, currency: EUR, yield: 1.2%, vol: 24%}
+correlation: {harbour/quarry: 60%, harbour/orchard: 65%, quarry/orchard: 55%}
+"""
+OPTION = """\
+contract: Call
+currency: EUR
+units: 1
+assets: [harbour]
+payoff: european
+terms: {side: call, strike: 100, expiry: 1y}
+"""
+TEXTBOOK = """\
+market: 0y
+rates: {EUR: 5%}
+assets: {harbour: {spot: 100, yield: 0%, vol: 25%}}
+"""
+
+
+def made(*texts: str) -> tuple[Request, list[str]]:
+    """The request of several files, a.yaml, b.yaml and so on, and its faults."""
+    documents, faults = [], []
+    for name, text in zip("abcdef", texts, strict=False):
+        found, wrong = parse_documents(text.encode(), f"{name}.yaml")
+        documents += found
+        faults += wrong
+    asked, faults = checked_request(documents, faults)
+    return asked, [str(fault) for fault in faults]
+
+
+@pytest.mark.parametrize("file", EXAMPLES, ids=lambda file: file.stem)
+def test_examples_load_and_have_dates(file: Path):
+    """Every shipped example is free of faults, dates included."""
+    asked = load([file])
+    assert asked.contracts
+    for contract in asked.contracts:
+        dated, faults = date_contract(contract, asked.market.valuation)
+        assert faults == []
+        assert dated.moments
+
+
+def test_every_shipped_definition_has_an_example():
+    """The library and its examples go together."""
+    used = {contract.payoff.name for file in EXAMPLES for contract in load([file]).contracts}
+    assert used == set(shipped_names())
+
+
+@pytest.mark.parametrize("name", shipped_names())
+def test_files_are_named_after_their_definitions(name: str):
+    """A shipped definition is found by the name of its file."""
+    assert Definitions()[name].body.get("payoff").text == name
+
+
+def test_files_in_any_order(tmp_path: Path):
+    """Contracts keep the order of the files; where the market and the definitions stand does not matter."""
+    for name, text in (("c", CONTRACT), ("m", MARKET), ("p", shipped_text("rainbow_option"))):
+        (tmp_path / f"{name}.yaml").write_text(text)
+    one, other = ([tmp_path / f"{name}.yaml" for name in names] for names in ("cm", "mpc"))
+    assert load(one).contracts[0].terms == load(other).contracts[0].terms
+    assert [document.body.get("payoff").text for document in load(one).payoffs] == ["rainbow_option"]
+    assert load(one).market == load(other).market
+
+
+def test_no_market_is_no_fault():
+    """A readback needs no market; what needs one asks for it."""
+    asked, faults = made(CONTRACT)
+    assert faults == []
+    assert asked.market is None
+
+
+def test_all_faults_of_all_documents_are_raised_at_once(tmp_path: Path):
+    """`load` raises the faults of contract, market, files and everything between them, in order of place."""
+    (tmp_path / "c.yaml").write_text(CONTRACT.replace("side: put", "side: pot"))
+    (tmp_path / "m.yaml").write_text(MARKET.replace("18%", "18"))
+    files = [str(tmp_path / name) for name in ("c.yaml", "m.yaml", "missing.yaml")]
+    with pytest.raises(InputError) as error:
+        load(files)
+    assert [str(fault.place) for fault in error.value.faults] == [
+        f"{files[0]}:10:9", f"{files[1]}:5:57", f"{files[2]}:1:1"]
+
+
+SLIPS = [
+    (CONTRACT, "currency: EUR", "currency: USD",
+     ["a.yaml:2:11: the market has no rates for 'USD'; it has 'EUR'",
+      "b.yaml:3:10: no funding spread for 'USD', the currency of the note 'Worst-of put'; write 'funding: "
+      "{USD: 0 bp}' to value it without the issuer's spread",
+      *(f"b.yaml:{line}:3: '{name}' is quoted in EUR, but 'Worst-of put' pays in USD; paying in another "
+        "currency (quanto) is for a later version"
+        for line, name in ((5, "harbour"), (6, "quarry"), (7, "orchard")))]),
+    (CONTRACT, "[harbour,", "[harbor,",
+     ["a.yaml:4:10: the market has no asset 'harbor'; did you mean 'harbour'?"]),
+    (MARKET, "funding: {EUR: 0 bp}\n", "",
+     ["b.yaml:1:9: no funding spread for 'EUR', the currency of the note 'Worst-of put'; write 'funding: "
+      "{EUR: 0 bp}' to value it without the issuer's spread"]),
+    (MARKET, ", quarry/orchard: 55%", "", ["b.yaml:8:14: no correlation for 'quarry/orchard'"]),
+    (MARKET, "correlation: {harbour/quarry: 60%, harbour/orchard: 65%, quarry/orchard: 55%}\n", "",
+     ["b.yaml:1:9: no correlation for 'harbour/quarry', 'harbour/orchard' and 'quarry/orchard'"]),
+]
+
+
+@pytest.mark.parametrize(("whole", "old", "new", "expected"), SLIPS,
+                         ids=[new or old for _, old, new, _ in SLIPS])
+def test_slips_between_documents(whole: str, old: str, new: str, expected: list[str]):
+    """What contract and market say of each other must fit, each fault at the document to change."""
+    assert whole.count(old) == 1
+    texts = [text.replace(old, new) if text == whole else text for text in (CONTRACT, MARKET)]
+    assert made(*texts)[1] == expected
+
+
+def test_currency_of_the_asset():
+    """An asset in another currency than the contract's is refused by name until quanto comes."""
+    market = MARKET.replace("quarry: {spot: 100, currency: EUR", "quarry: {spot: 100, currency: USD")
+    assert made(CONTRACT, market)[1] == ["b.yaml:6:3: 'quarry' is quoted in USD, but 'Worst-of put' pays in "
+                                         "EUR; paying in another currency (quanto) is for a later version"]
+
+
+def test_correlations_that_cannot_be():
+    """A matrix that is not positive semi-definite is refused; the nearest one that is printed, and then
+    accepted."""
+    wrong = MARKET.replace("60%", "90%").replace("65%", "-80%")
+    _, (fault,) = made(CONTRACT, wrong)
+    assert fault.startswith("b.yaml:8:14: no assets can be correlated like this (the smallest eigenvalue of "
+                            "the matrix is -0.")
+    nearest = fault.split("the nearest correlations that can be: ")[1]
+    head = wrong[: wrong.index("correlation:")]
+    assert made(CONTRACT, f"{head}correlation: {{{nearest}}}\n")[1] == []
+
+
+def test_correlation_of_other_assets_is_not_judged():
+    """Only the contract's own assets must make a correlation matrix."""
+    contract = CONTRACT.replace("[harbour, quarry, orchard]", "[harbour, quarry]")
+    assert made(contract, MARKET.replace("60%", "90%").replace("65%", "-80%"))[1] == []
+
+
+def test_times_and_dates_do_not_mix():
+    """A textbook contract needs a textbook market, and the other way round."""
+    assert made(OPTION, MARKET)[1] == [
+        "b.yaml:1:9: 'Call' uses times, and needs a market that begins 'market: 0y'"]
+    assert "b.yaml:1:9: 'Worst-of put' uses calendar dates, and needs a market of a date" in made(CONTRACT,
+                                                                                                  TEXTBOOK)[1]
+
+
+def test_two_markets():
+    """Two markets in one call are an error."""
+    assert made(OPTION, TEXTBOOK,
+                TEXTBOOK)[1] == ["c.yaml:1:1: a second market; the first stands at b.yaml:1:1"]
+
+
+def test_two_contracts_of_one_title():
+    """Results go by title, so in one call each contract has its own."""
+    assert made(OPTION, OPTION)[1] == [
+        "b.yaml:1:11: the contract 'Call' stands at a.yaml:1:11 already; each needs its own title"]
+
+
+def test_own_definitions():
+    """A user's definition wins over a shipped one, which is said; two of one name are a fault; an unused
+    one is read."""
+    own = shipped_text("european").replace("Call or put", "Own call or put")
+    asked, faults = made(OPTION, own)
+    assert faults == []
+    assert asked.contracts[0].payoff.place.file == "b.yaml"
+    assert asked.contracts[0].assumptions == (
+        f"'european' is defined at {asked.contracts[0].payoff.place}; the shipped definition of that name is "
+        "not used",)
+    assert made(OPTION, shipped_text("european"))[0].contracts[0].assumptions == ()
+    (fault,) = made(OPTION, own, own)[1]
+    assert fault.endswith(f": the payoff 'european' is defined at {asked.contracts[0].payoff.place} already")
+    assert [fault.split(":")[0] for fault in made(OPTION, "payoff: other\nevents: []\n")[1]] == ["b.yaml"]
+
+
+def test_funding_of_options_is_an_assumption():
+    """A contract per unit without a funding spread is discounted without one, and says so."""
+    asked, faults = made(OPTION, TEXTBOOK)
+    assert faults == []
+    assert asked.contracts[0].assumptions == (NO_FUNDING,)
+    asked, _ = made(OPTION, TEXTBOOK.replace("rates", "funding: {EUR: 10 bp}\nrates"))
+    assert asked.contracts[0].assumptions == ()
+
+
+MOST_WORDS = ["", "-1", "0", "70", "nan", "1e999", "[]", "{}", "[1, 2]", "{a: 1}", "2026-02-30", "9999-12-31",
+              "2026-11-01", "0y", "0.5y", "1y", "-1%", "900%", "3 bp", "expiry", "observations.last",
+              "final.first",
+              "2 business days", "1 day", "99999 years", "true", "call", "harbour", "none", "'x'", "market",
+              "null",
+              "{continuous: [0y, 1y]}", "{count: 3, until: 1y}",
+              "{from: 2026-12-01, until: 2027-12-01, every: 1 month}",
+              "\u00e9", "~", "*a", "&a 1", "? x", "a: b", "spot", "<<", "!!int 3"]
+
+
+@st.composite
+def mutations(draw: st.DrawFn) -> str:
+    """A shipped example with its definition, a few pieces of it replaced, dropped or doubled."""
+    text = draw(st.sampled_from(EXAMPLE_TEXTS))
+    if draw(st.booleans()):
+        names = [line.split()[1] for line in text.splitlines() if line.startswith("payoff:")]
+        name = draw(st.sampled_from(names))
+        text += "---\n" + shipped_text(name)
+    for _ in range(draw(st.integers(1, 4))):
+        lines = text.splitlines() or [""]
+        k = draw(st.integers(0, len(lines) - 1))
+        kind = draw(st.sampled_from(["value", "drop", "double", "swap", "cut", "inner"]))
+        if kind == "value" and ":" in lines[k]:
+            lines[k] = lines[k].split(":")[0] + ": " + draw(st.sampled_from(MOST_WORDS))
+        elif kind == "drop":
+            del lines[k]
+        elif kind == "double":
+            lines.insert(k, lines[k])
+        elif kind == "swap":
+            other = draw(st.integers(0, len(lines) - 1))
+            lines[k], lines[other] = lines[other], lines[k]
+        elif kind == "inner":
+            words = lines[k].split(" ")
+            words[draw(st.integers(0, len(words) - 1))] = draw(st.sampled_from(MOST_WORDS))
+            lines[k] = " ".join(words)
+        else:
+            lines[k] = lines[k][: draw(st.integers(0, len(lines[k])))]
+        text = "\n".join(lines) + "\n"
+    return text
+
+
+@given(mutations())
+def test_no_wrong_document_gives_a_traceback(text: str):
+    """Whatever is done to an example, the outcome is a dated contract or faults with places, never an
+    exception."""
+    documents, faults = parse_documents(text.encode(), "m.yaml")
+    asked, faults = checked_request(documents, faults)
+    for contract in asked.contracts:
+        dated, wrong = date_contract(contract, asked.market.valuation if asked.market else None)
+        assert (dated is None) == bool(wrong)
+        faults = [*faults, *wrong]
+    for fault in faults:
+        assert fault.place.line >= 1
+        assert fault.text and not fault.text.endswith(".") and "object at 0x" not in fault.text
+
+
+def test_requests_load_nothing_heavy():
+    """Faults are told without numpy, numba or scipy being imported."""
+    code = ("import sys\nfrom mcx.checked.load import request\n"
+            f"request([{str(EXAMPLES[0])!r}])\n"
+            "print(*sorted({'numpy', 'numba', 'scipy', 'holidays'} & set(sys.modules)))")
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True,
+                          cwd=Path(__file__).parents[2])
+    assert done.stdout.split() == []
+
+
+def test_request_gives_what_is_sound():
+    """`request` hands out the sound documents beside the faults of the others."""
+    asked, faults = request([EXAMPLES[0], "missing.yaml"])
+    assert len(asked.contracts) == 1
+    assert [str(fault) for fault in faults] == ["missing.yaml:1:1: there is no such file"]

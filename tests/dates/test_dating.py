@@ -1,0 +1,452 @@
+"""Dated contracts: occasions and their numbers, payments and their days, and the faults that only dates
+can show."""
+
+from __future__ import annotations
+
+import math
+from datetime import date
+
+import pytest
+
+from mcx.checked.load import checked_request
+from mcx.dates.dated_contract import DatedContract, DatedEvent, Day
+from mcx.dates.dating import date_contract
+from mcx.text.documents import parse_documents
+
+TODAY = date(2026, 12, 1)
+HEAD = """\
+payoff: own
+terms:
+  observations: {type: dates}
+"""
+CONTRACT = """\
+contract: Harbour note
+currency: EUR
+notional: 1000
+assets: [harbour]
+start: 2026-11-16
+day_count: 30/360
+settlement: 2 business days
+calendar: {holidays: ECB, roll: modified following}
+payoff: own
+terms:
+  observations: {from: 2027-02-16, until: 2027-11-16, every: 3 months}
+"""
+IN_YEARS = """\
+contract: Harbour option
+currency: EUR
+units: 1
+assets: [harbour]
+payoff: own
+terms:
+  observations: {count: 4, until: 1y}
+"""
+PAY = "  - at: observations\n    pay: spot / 100\n"
+
+
+def dated(terms: str = "", events: str = PAY, more: str = "", valuation: date | None = TODAY,
+          contract: str = CONTRACT,
+          parts: str = "") -> tuple[DatedContract | None, list[str]]:
+    """A dated contract from more terms of a definition, its parts before the events, its events, and the
+    contract's further lines; and the faults."""
+    text = f"{HEAD}{terms}{parts}events:\n{events}---\n{contract}{more}"
+    documents, faults = parse_documents(text.encode(), "n.yaml")
+    asked, faults = checked_request(documents, faults)
+    assert faults == [], "\n".join(map(str, faults))
+    found, faults = date_contract(asked.contracts[0], valuation)
+    assert (found is None) == bool(faults)
+    return found, [fault.text for fault in faults]
+
+
+def events_of(found: DatedContract) -> list[DatedEvent]:
+    return [event for moment in found.moments for event in moment.events]
+
+
+def test_days_have_times_and_numbers():
+    """Occasions count within their schedule; times count from the valuation date, `years` from the start,
+    both Actual/365 (Fixed); `period` goes by the contract's day count between rolled dates."""
+    found, _ = dated()
+    occasions = [event.occasion for event in events_of(found)]
+    assert [str(one.day) for one in occasions] == ["2027-02-16", "2027-05-17", "2027-08-16", "2027-11-16"]
+    assert [one.day.time for one in occasions] == [77 / 365, 167 / 365, 258 / 365, 350 / 365]
+    assert [one.years for one in occasions] == [92 / 365, 182 / 365, 273 / 365, 1.0]
+    assert [one.period for one in occasions] == [90 / 360, 91 / 360, 89 / 360, 90 / 360]
+    assert [(one.schedule, one.nth, one.n_dates) for one in occasions] == [
+        ("observations", k, 4) for k in (1, 2, 3, 4)]
+    assert [one.dates for one in occasions] == [{"observations": k} for k in range(4)]
+    assert [one.earlier for one in occasions] == [None, *(one.day for one in occasions[:3])]
+    assert (found.start, found.valuation) == (Day(-15 / 365, date(2026, 11, 16)), TODAY)
+    assert found.calendar_version.endswith(" ECB")
+    assert found.last == occasions[-1].day
+
+
+@pytest.mark.parametrize(
+    ("day_count", "periods"),
+    [("Actual/360", [92 / 360, 90 / 360, 91 / 360, 92 / 360]),
+     ("30E/360", [90 / 360, 91 / 360, 89 / 360, 90 / 360]),
+     ("A/365F", [92 / 365, 90 / 365, 91 / 365, 92 / 365]),
+     ("Act/Act", [92 / 365, 90 / 365, 91 / 365, 92 / 365])],
+)
+def test_day_counts(day_count: str, periods: list[float]):
+    """`period` follows the contract's day count, under any of the names that the standard has for it."""
+    found, _ = dated(contract=CONTRACT.replace("30/360", day_count))
+    assert [event.occasion.period for event in events_of(found)] == pytest.approx(periods, abs=1e-15)
+
+
+def test_no_day_count_no_period():
+    """Where nothing is paid by the period, no day count is needed, and `period` is not a number."""
+    found, _ = dated(contract=CONTRACT.replace("day_count: 30/360\n", ""))
+    assert math.isnan(events_of(found)[0].occasion.period)
+
+
+@pytest.mark.parametrize(
+    ("part", "numbers"),
+    [("", [1, 2, 3, 4]), (".first", [1]), (".last", [4]), (".but_first", [2, 3, 4]),
+     (".but_last", [1, 2, 3])],
+)
+def test_parts_keep_the_numbers_of_the_whole(part: str, numbers: list[int]):
+    """A part of a schedule keeps `nth`, `n_dates` and `period`; the first of the part has no earlier
+    occasion."""
+    found, _ = dated(events=PAY.replace("at: observations", f"at: observations{part}"))
+    occasions = [event.occasion for event in events_of(found)]
+    assert [one.nth for one in occasions] == numbers
+    assert {one.n_dates for one in occasions} == {4}
+    assert occasions[0].earlier is None
+    assert occasions[0].period == {1: 90 / 360, 2: 91 / 360, 4: 90 / 360}[numbers[0]]
+
+
+def test_from_and_until_narrow():
+    """`from` and `until` keep what lies between two dates, both included, after rolling."""
+    found, _ = dated(terms="  first: {type: date}\n  final: {type: date}\n",
+                     events="  - at: observations\n    from: first\n    until: final\n    pay: 1\n",
+                     more="  first: 2027-05-16\n  final: 2027-08-16\n")
+    assert [event.occasion.nth for event in events_of(found)] == [2, 3]
+
+
+def test_optional_dates_that_are_not_stated():
+    """An optional date that is not stated narrows nothing, and nothing happens at it."""
+    found, _ = dated(terms="  first: {type: date, optional: true}\n",
+                     events="  - at: observations\n    from: first\n    pay: 1\n  - at: first\n    pay: 2\n")
+    assert [event.occasion.nth for event in events_of(found)] == [1, 2, 3, 4]
+
+
+def test_single_dates_have_no_schedule():
+    """A date of its own is the first of one, its period counted from the start."""
+    found, _ = dated(terms="  final: {type: date}\n", events="  - at: final\n    pay: spot\n",
+                     more="  final: 2027-11-16\n")
+    (event,) = events_of(found)
+    assert (event.occasion.schedule, event.occasion.nth, event.occasion.n_dates) == ("", 1, 1)
+    assert event.occasion.period == 1.0
+    assert event.occasion.dates == {"observations": 3}
+
+
+def test_file_order_within_a_day():
+    """On one day running values come before events, both in file order."""
+    found, _ = dated(
+        parts="running:\n  count: {total: 1, at: observations.last}\n  high: {highest: spot, at: "
+              "observations}\n",
+        events="  - at: observations.last\n    pay: high\n  - at: observations\n    pay: 1\n"
+               "  - at: observations.last\n    pay: count\n")
+    last = found.moments[-1]
+    assert [update.running.name for update in last.updates] == ["count", "high"]
+    assert [update.first for update in last.updates] == [True, False]
+    lines = [event.event.place.line for event in last.events]
+    assert lines == sorted(lines)
+    assert len(lines) == 3
+
+
+# When amounts are paid
+
+
+@pytest.mark.parametrize(
+    ("observed", "paid"),
+    [("2027-03-24", "2027-03-30"),  # over Easter: Good Friday 26 March, Easter Monday 29 March
+     ("2027-12-23", "2027-12-27"),  # 24 December is good, 25 and 26 are a weekend
+     ("2026-12-23", "2026-12-28"),  # Friday 25 December is not good
+     ("2027-04-29", "2027-05-03")],  # 1 May is a Saturday
+)
+def test_settlement_lag(observed: str, paid: str):
+    """An amount without `due` is paid after the contract's settlement lag, in its calendar's business
+    days."""
+    found, _ = dated(contract=CONTRACT.replace("{from: 2027-02-16, until: 2027-11-16, every: 3 months}",
+                                               f"[{observed}]"))
+    (event,) = events_of(found)
+    assert [str(day) for day in event.due.values()] == [paid]
+
+
+def test_other_due_dates():
+    """`due` may be the same day, a date, or the date that stands at the same place of a list."""
+    found, faults = dated(
+        terms="  paid_on: {type: dates, per: observations}\n  maturity: {type: date}\n",
+        events="  - at: observations\n    pay: 1\n    due: paid_on\n  - at: observations.last\n    pay: 1\n"
+               "    due: maturity\n  - at: observations.first\n    pay: 1\n    due: same day\n",
+        more="  paid_on: [2027-02-20, 2027-05-19, 2027-08-18, 2027-11-18]\n  maturity: 2027-12-01\n")
+    assert faults == []
+    due = {(event.occasion.nth,
+            event.event.place.line): str(*event.due.values()) for event in events_of(found)}
+    first, last, same = sorted({line for _, line in due})
+    assert [due[k, first] for k in (1, 2, 3, 4)] == ["2027-02-22", "2027-05-19", "2027-08-18", "2027-11-18"]
+    assert (due[4, last], due[1, same]) == ("2027-12-01", "2027-02-16")
+
+
+def test_payment_before_its_observation():
+    """A payment date before its observation is a fault at that date."""
+    _, faults = dated(terms="  paid_on: {type: dates, per: observations}\n",
+                      events="  - at: observations\n    pay: 1\n    due: paid_on\n",
+                      more="  paid_on: [2027-02-18, 2027-05-14, 2027-08-18, 2027-11-18]\n")
+    assert faults == ["the payment of what is observed on 2027-05-17 falls due before, on 2027-05-14"]
+
+
+def test_payment_beyond_the_calendar():
+    """A payment day that the list of holidays does not reach is a fault."""
+    contract = CONTRACT.replace("{from: 2027-02-16, until: 2027-11-16, every: 3 months}", "[2100-12-30]")
+    _, faults = dated(contract=contract)
+    assert faults == ["the payment of 2100-12-30: 2101-01-01 lies outside 1999 to 2100, the years ECB covers"]
+
+
+# Textbook contracts
+
+
+def test_textbook_contracts_count_from_today():
+    """Times are years from the valuation; start is 0y, payment on the spot, the period a difference of
+    times."""
+    found, _ = dated(contract=IN_YEARS, valuation=None)
+    occasions = [event.occasion for event in events_of(found)]
+    assert [one.day for one in occasions] == [Day(0.25), Day(0.5), Day(0.75), Day(1.0)]
+    assert [one.years for one in occasions] == [0.25, 0.5, 0.75, 1.0]
+    assert [one.period for one in occasions] == [0.25] * 4
+    assert [*events_of(found)[1].due.values()] == [Day(0.5)]
+    assert (found.start, found.calendar_version) == (Day(0.0), "")
+
+
+def test_no_valuation_date():
+    """Without a market, times count from the contract's start."""
+    found, _ = dated(valuation=None)
+    assert (found.start.time, found.moments[0].day.time) == (0.0, 92 / 365)
+
+
+# Watches
+
+
+def test_continuous_watches():
+    """A stretch is a watch with both its ends, by a term or between two dates of the definition."""
+    found, _ = dated(
+        terms="  watched: {type: watch}\n",
+        parts="running:\n  hit: {ever: spot < 80, at: watched}\n"
+              "  low:\n    lowest: spot\n    at: {continuous: [observations.first, observations.last]}\n",
+        events="  - at: observations.last\n    pay: (low / 100) if hit else 1\n",
+        more="  watched: {continuous: [2026-12-01, observations.last]}\n")
+    assert [(watch.running.name, str(watch.start), str(watch.end)) for watch in found.watches] == [
+        ("hit", "2026-12-01", "2027-11-16"), ("low", "2027-02-16", "2027-11-16")]
+    assert found.assumptions == ()
+
+
+@pytest.mark.parametrize("at",
+                         ["observations", "{from: 2026-12-02, until: 2027-11-16, every: 1 business day}"])
+def test_dated_watches(at: str):
+    """A watch term may as well give dates; then the running value is updated on them. Of the 250 weekdays
+    here four are holidays of the ECB."""
+    found, _ = dated(terms="  watched: {type: watch}\n",
+                     parts="running:\n  hit: {ever: spot < 80, at: watched}\n",
+                     events="  - at: observations.last\n    pay: 1 if hit else 0\n",
+                     more=f"  watched: {at}\n")
+    assert found.watches == ()
+    assert sum(len(moment.updates) for moment in found.moments) == (4 if at == "observations" else 246)
+
+
+def test_only_extremes_and_flags_are_watched_continuously():
+    """An average needs dates."""
+    _, faults = dated(terms="  watched: {type: watch}\n",
+                      parts="running:\n  mean_level: {average: spot, at: watched}\n",
+                      events="  - at: observations.last\n    pay: mean_level\n",
+                      more="  watched: {continuous: [2026-12-01, observations.last]}\n")
+    assert faults == ["'mean_level' is the average of what it observes and cannot be watched continuously; "
+                      "lowest, highest, ever, always can"]
+
+
+def test_watch_begun_before_today():
+    """A watch that began before the valuation date needs to know what has happened since."""
+    _, faults = dated(terms="  watched: {type: watch}\n",
+                      parts="running:\n  hit: {ever: spot < 80, at: watched}\n",
+                      events="  - at: observations.last\n    pay: 1 if hit else 0\n",
+                      more="  watched: {continuous: [2026-11-16, observations.last]}\n")
+    assert faults == ["the start of the watch 2026-11-16 lies before the valuation date 2026-12-01; a "
+                      "seasoned trade needs fixings, which a later version reads"]
+
+
+# What dates show
+
+
+def test_observation_before_the_valuation_date():
+    """A past observation needs its fixing, and is refused until fixings are read."""
+    _, faults = dated(valuation=date(2027, 3, 1))
+    assert faults == ["2027-02-16 lies before the valuation date 2027-03-01; a seasoned trade needs fixings, "
+                      "which a later version reads"]
+
+
+def test_past_dates_that_are_not_observed_do_no_harm():
+    """A schedule may begin in the past where its events begin later."""
+    found, faults = dated(events=PAY.replace("at: observations", "at: observations.last"),
+                          valuation=date(2027, 3, 1))
+    assert faults == []
+    assert events_of(found)[0].occasion.nth == 4
+
+
+def test_observation_today():
+    """An observation on the valuation date takes the market's spot, which is said."""
+    found, _ = dated(valuation=date(2027, 2, 16))
+    assert found.moments[0].day.time == 0
+    assert found.assumptions == ("the observation on 2027-02-16, the valuation date, uses the market's spot",)
+
+
+def test_dates_before_the_start():
+    """No date of a contract lies before its start."""
+    _, faults = dated(contract=CONTRACT.replace("start: 2026-11-16", "start: 2027-03-01"))
+    assert faults == ["2027-02-16 lies before the contract's start 2027-03-01"]
+    late = CONTRACT.replace("start: 2026-11-16", "start: 2027-03-01")
+    _, faults = dated(contract=late, valuation=date(2027, 2, 26))
+    assert faults == ["2027-02-16 lies before the contract's start 2027-03-01"]
+
+
+def test_unknown_holidays():
+    """A list of holidays that nobody keeps is a fault with a near name."""
+    _, faults = dated(contract=CONTRACT.replace("ECB", "XNYSE"))
+    assert faults == ["there are no holidays 'XNYSE'; did you mean 'XNYS'?"]
+
+
+def test_lists_for_each_date_have_its_length():
+    """A list for each date of a schedule has as many entries as that; both counts are told, for every
+    list."""
+    _, faults = dated(
+        terms="  barrier: {type: percent, per: observations}\n  paid_on: {type: dates, per: observations}\n",
+        events="  - at: observations\n    pay: barrier\n    due: paid_on\n",
+        more="  barrier: [100%, 95%, 90%]\n  paid_on: [2027-02-18, 2027-05-19]\n")
+    assert faults == ["'barrier' has 3 numbers; 'observations' has 4 dates, 2027-02-16 to 2027-11-16",
+                      "'paid_on' has 2 dates; 'observations' has 4 dates, 2027-02-16 to 2027-11-16"]
+
+
+def test_list_read_on_another_day():
+    """A list for each date of a schedule cannot be read on a day that is none of them; one number can."""
+    terms = "  barrier: {type: percent, per: observations}\n  final: {type: date}\n"
+    events = "  - at: final\n    pay: barrier\n"
+    _, faults = dated(terms=terms, events=events, more="  barrier: [1%, 2%, 3%, 4%]\n  final: 2027-11-17\n")
+    assert faults == ["'barrier' has one value for each date of 'observations' and is read on 2027-11-17, "
+                      "which is none of them (n.yaml:8:10)"]
+    assert dated(terms=terms, events=events, more="  barrier: 4%\n  final: 2027-11-17\n")[1] == []
+    assert dated(terms=terms, events=events,
+                 more="  barrier: [1%, 2%, 3%, 4%]\n  final: observations.last\n")[1] == []
+
+
+MEAN = "running:\n  mean_level: {average: spot, at: observations}\n"
+
+
+def test_running_value_read_before_its_first_date():
+    """Reading before anything was observed is a fault of the dates that the contract gives."""
+    terms, events = "  early: {type: date}\n", "  - at: early\n    pay: mean_level / 100\n"
+    _, faults = dated(terms=terms, parts=MEAN, events=events, more="  early: 2027-01-15\n")
+    assert faults == ["'mean_level' is read on 2027-01-15 (n.yaml:9:10), but begins on 2027-02-16"]
+    assert dated(terms=terms, parts=MEAN, events=events, more="  early: 2027-02-16\n")[1] == []
+    started = MEAN.replace("at: observations", "at: observations, start: 100")
+    assert dated(terms=terms, parts=started, events=events, more="  early: 2027-01-15\n")[1] == []
+
+
+def test_what_the_terms_rule_out_is_not_read():
+    """A branch that a choice, a flag or the number of the date settles is as if it were not written."""
+    terms = "  early: {type: date}\n  averaged: {type: flag}\n"
+    read = "    pay: (mean_level / 100) if averaged else 1\n"
+    for flag, count in (("true", 1), ("false", 0)):
+        _, faults = dated(terms=terms, parts=MEAN, events=f"  - at: early\n{read}",
+                          more=f"  early: 2027-01-15\n  averaged: {flag}\n")
+        assert len(faults) == count
+    _, faults = dated(parts="running:\n  gain: {total: 1 if nth == 1 else gain_before, at: observations}\n"
+                            "  gain_before: {latest: spot, at: observations}\n",
+                      events="  - at: observations.last\n    pay: gain\n")
+    assert faults == []
+
+
+def test_running_values_see_those_above_them():
+    """On one day a running value sees those above it in the file, not yet those below it."""
+    above = "  one: {total: 1, at: observations}\n  two: {total: one, at: observations}\n"
+    below = "  two: {total: one, at: observations}\n  one: {total: 1, at: observations}\n"
+    pays = "  - at: observations.last\n    pay: two\n"
+    assert dated(parts=f"running:\n{above}", events=pays)[1] == []
+    (fault,) = dated(parts=f"running:\n{below}", events=pays)[1]
+    assert fault.startswith("'one' is read on 2027-02-16 (")
+
+
+def test_watches_are_seen_in_file_order_too():
+    """On its first day a continuous watch is seen by the running values below it and by events, not by
+    those above."""
+    watch = "  low: {lowest: spot, at: {continuous: [observations.first, observations.last]}}\n"
+    total = "  sum_of_lows: {total: low, at: observations}\n"
+    pays = "  - at: observations.last\n    pay: sum_of_lows\n"
+    assert dated(parts=f"running:\n{watch}{total}", events=pays)[1] == []
+    (fault,) = dated(parts=f"running:\n{total}{watch}", events=pays)[1]
+    assert fault.startswith("'low' is read on 2027-02-16 (")
+    assert dated(parts=f"running:\n{watch}", events="  - at: observations.first\n    pay: low\n")[1] == []
+
+
+def test_previous_reads_the_date_before():
+    """What `previous` asks for must have had its value on the date before."""
+    read = "  - at: observations\n    pay: previous(mean_level, 0)\n"
+    assert dated(parts=MEAN, events=read)[1] == []
+    (fault,) = dated(parts=MEAN.replace("at: observations", "at: observations.but_first"), events=read)[1]
+    assert "'mean_level' is read on 2027-02-16" in fault
+
+
+def test_after_the_end_nothing_is_read():
+    """What stands after an unconditional end never happens and needs no values."""
+    ends = "  - at: observations.first\n    end:\n"
+    later = MEAN.replace("observations", "observations.last")
+    reads = "  - at: observations.but_last\n    pay: mean_level\n"
+    assert dated(parts=later, events=ends + reads)[1] == []
+    assert len(dated(parts=later, events=reads)[1]) == 1
+
+
+def test_running_values_that_nothing_reads_are_left_out():
+    """A running value that no payment depends on is not observed at all, so it cannot be at fault either."""
+    parts = ("running:\n  unread: {total: mean_level, at: observations.first}\n  mean_level: {average: spot, "
+             "at: late}\n"
+             "  count: {total: 1, at: observations}\n")
+    found, faults = dated(terms="  late: {type: date}\n", parts=parts,
+                          events="  - at: observations.last\n    pay: count\n", more="  late: 2027-12-01\n")
+    assert faults == []
+    assert {update.running.name for moment in found.moments for update in moment.updates} == {"count"}
+    assert found.last.date == date(2027, 11, 16)
+
+
+OPTIONAL = "  cap: {type: percent, optional: true}\n  capped: {type: flag}\n"
+CAPPED = "  - at: observations\n    pay: min(spot / 100, cap) if capped else (spot / 100)\n"
+
+
+def test_optional_terms_that_count_must_be_stated():
+    """An optional term that is read, and not stated, is missing in the contract; `given` would ask for it."""
+    _, faults = dated(terms=OPTIONAL, events=CAPPED, more="  capped: true\n")
+    assert faults == ["the term 'cap' is missing: it is optional in 'own', but with these terms it is read "
+                      "on 2027-02-16 (n.yaml:8:26)"]
+    given = CAPPED.replace("if capped", "if given(cap)")
+    assert dated(terms=OPTIONAL.splitlines()[0] + "\n", events=given)[1] == []
+
+
+def test_optional_terms_that_do_not_count_are_refused():
+    """An optional term that is stated but never read under these terms is a misunderstanding."""
+    _, faults = dated(terms=OPTIONAL, events=CAPPED, more="  capped: false\n  cap: 120%\n")
+    assert faults == ["'cap' is stated, but with these terms 'own' never reads it"]
+    assert dated(terms=OPTIONAL, events=CAPPED, more="  capped: true\n  cap: 120%\n")[1] == []
+
+
+def test_events_that_never_happen_are_said():
+    """An event whose `from` lies after its last date never happens, which is an assumption worth printing."""
+    found, faults = dated(terms="  first_call: {type: date}\n", more="  first_call: 2028-01-03\n",
+                          events=PAY + "  - at: observations\n    from: first_call\n    name: called\n    "
+                                       "if: spot > 1\n"
+                                       "    then: [end]\n")
+    assert faults == []
+    assert found.assumptions == ("'called' never happens: no date of 'observations' from 'first_call'",)
+
+
+def test_nothing_ever_happens():
+    """A contract none of whose events has a date is refused."""
+    _, faults = dated(terms="  once_only: {type: date, optional: true}\n",
+                      events="  - at: once_only\n    pay: 1\n")
+    assert faults == ["nothing is ever observed or paid: no event has a date"]
