@@ -18,6 +18,7 @@ from mcx.checked.contract import Contract
 from mcx.checked.market import AssetMarket, Curve, Market, Node, Quoted
 from mcx.faults import Place
 from mcx.leaves.correlation import SINGULAR, correlation_matrix, lower_factor
+from mcx.leaves.grouped import grouped
 from mcx.leaves.market_map import MarketMap
 from mcx.tape.program import Leaf
 
@@ -77,10 +78,12 @@ def moved(market: Market, shifts: Mapping[Input, float | complex]) -> Market:
 def jacobian(market: Market, contract: Contract, leaves: Sequence[Leaf]) -> np.ndarray:
     """d leaf / d number, shape (leaves, numbers), the numbers as `inputs` lists them: by a complex step, so exact to
     rounding (W. Squire & G. Trapp, "Using complex variables to estimate derivatives of real functions", 1998)."""
-    leaves = tuple(leaves)
-    columns = [MarketMap(moved(market, {number: complex(0.0, STEP)}), contract).values(leaves).imag / STEP
-               for number in inputs(market, contract)]
-    return np.array(columns).reshape(-1, len(leaves)).T
+    groups, numbers = grouped(leaves), inputs(market, contract)
+    found = np.empty((groups.size, len(numbers)))
+    for column, number in enumerate(numbers):
+        shifted = MarketMap(moved(market, {number: complex(0.0, STEP)}), contract)
+        found[:, column] = shifted.values(groups).imag / STEP
+    return found
 
 
 def without_derivative(market: Market, contract: Contract) -> dict[Input, str]:

@@ -15,6 +15,7 @@ from mcx.checked.contract import Contract
 from mcx.checked.market import Market
 from mcx.leaves.correlation import correlation_matrix, lower_factor
 from mcx.leaves.curves import LogCurve, log_curve
+from mcx.leaves.grouped import Factors, Group, Grouped, grouped
 from mcx.leaves.vols import VolCurve, covariance_integral, vol_curve
 from mcx.tape.formulas import figure
 from mcx.tape.program import Leaf, LeafKind
@@ -69,24 +70,21 @@ class MarketMap:
         names = self.contract.assets
         return float(self._correlation[names.index(first), names.index(second)])
 
-    def values(self, leaves: Iterable[Leaf]) -> np.ndarray:
+    def values(self, leaves: Iterable[Leaf] | Grouped) -> np.ndarray:
         """The leaves' values, shape (leaves,)."""
-        leaves = tuple(leaves)
-        groups: dict[tuple[LeafKind, int], list[int]] = {}
-        for number, leaf in enumerate(leaves):
-            groups.setdefault((leaf.kind, -1 if leaf.kind is LeafKind.FACTOR else leaf.asset), []).append(number)
-        found = {key: self._values(*key, [leaves[number] for number in numbers]) for key, numbers in groups.items()}
-        values = np.empty(len(leaves), dtype=np.result_type(np.float64, *found.values()))
-        for key, numbers in groups.items():
-            values[numbers] = found[key]
+        leaves = leaves if isinstance(leaves, Grouped) else grouped(leaves)
+        found = [(group.positions, self._values(group)) for group in leaves.groups]
+        found += [(factors.positions, self._factors(factors)) for factors in leaves.factors]
+        values = np.empty(leaves.size, dtype=np.result_type(np.float64, *(part for _, part in found)))
+        for positions, part in found:
+            values[positions] = part
         return values
 
-    def _values(self, kind: LeafKind, asset: int, leaves: Sequence[Leaf]) -> np.ndarray:
-        """The values of leaves of one kind, and of one asset where that kind is about one."""
-        starts, ends = (np.array([getattr(leaf, name) for leaf in leaves]) for name in ("start", "end"))
-        match kind:
+    def _values(self, group: Group) -> np.ndarray:
+        asset, starts, ends = group.asset, group.starts, group.ends
+        match group.kind:
             case LeafKind.LOG_SPOT:
-                return np.full(len(leaves), np.log(self._spots[asset]))
+                return np.full(len(ends), np.log(self._spots[asset]))
             case LeafKind.FORWARD:
                 return self._spots[asset] * np.exp(self._growth(asset, ends))
             case LeafKind.VARIANCE:
@@ -96,11 +94,14 @@ class MarketMap:
                 return growth - 0.5 * self._variance(asset, starts, ends)
             case LeafKind.DISCOUNT:
                 return self.funded_discount(ends)
-            case LeafKind.FACTOR:
-                return self._factors(leaves)
             case LeafKind.TERM:
-                return np.array([figure(self.contract, leaf) for leaf in leaves])
-        raise ValueError(f"no leaf of the market: {kind}")
+                return np.array([figure(self.contract, leaf) for leaf in group.leaves])
+        raise ValueError(f"no leaf of the market: {group.kind}")
+
+    def _factors(self, factors: Factors) -> np.ndarray:
+        """One factorisation for each step."""
+        lower = lower_factor(self.step_covariance(factors.assets, factors.starts, factors.ends))
+        return lower[factors.steps, factors.rows, factors.columns]
 
     def _growth(self, asset: int, time: float | np.ndarray) -> np.ndarray:
         """The log of the forward over the spot."""
@@ -112,24 +113,6 @@ class MarketMap:
     def _variance(self, asset: int, start: np.ndarray, end: np.ndarray) -> np.ndarray:
         vol = self._vols[asset]
         return covariance_integral(vol, vol, start, end)
-
-    def _factors(self, leaves: Sequence[Leaf]) -> np.ndarray:
-        """FACTOR leaves: one factorisation for all steps in which the same assets move."""
-        moving: dict[tuple[float, float], set[int]] = {}
-        for leaf in leaves:
-            moving.setdefault((leaf.start, leaf.end), set()).update((leaf.asset, leaf.other))
-        groups: dict[tuple[int, ...], list[tuple[float, float]]] = {}
-        for step, assets in moving.items():
-            groups.setdefault(tuple(sorted(assets)), []).append(step)
-        found = {}
-        for assets, steps in groups.items():
-            factors = lower_factor(self.step_covariance(assets, *np.array(steps).T))
-            found.update({step: (assets, factor) for step, factor in zip(steps, factors)})
-        values = []
-        for leaf in leaves:
-            assets, factor = found[leaf.start, leaf.end]
-            values.append(factor[assets.index(leaf.asset), assets.index(leaf.other)])
-        return np.array(values)
 
     def step_covariance(self, assets: Sequence[int], start: np.ndarray, end: np.ndarray) -> np.ndarray:
         """The covariance of the assets' logs over steps, shape (steps, assets, assets): correlation times the integral
