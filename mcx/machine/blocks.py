@@ -26,8 +26,8 @@ _CACHE_LINE = 8  # float64
 
 @jit
 def sweep(code, scalars, outputs, normals, uniforms, seed, stream, numbers, paths, registers, words,
-          means, squares, bad, values):  # fmt: skip
-    """Run whole blocks of paths and sum each output over each group of 64.
+          means, squares, bad, sums, values):  # fmt: skip
+    """Run whole blocks of paths and sum each output, and what the code sums, over each group of 64.
 
     numbers    (blocks * lanes,) uint64: path numbers, of which the first `paths` count
     registers  (rows + 1, more than lanes) float64 and words (4, lanes) int32: room to work
@@ -35,14 +35,15 @@ def sweep(code, scalars, outputs, normals, uniforms, seed, stream, numbers, path
     squares    (groups, outputs), written: the sum of squares about that mean
     bad        (groups,) int64, written: path * outputs + output of the first value that is not finite, with
                the path counted from the group's first; -1 if there is none
+    sums       (groups up to the end of a block, sums), written: what the code sums
     values     (paths, outputs), written; or (0, outputs)
     """
     lanes, width = words.shape[1], outputs.shape[0]
     tree = registers[registers.shape[0] - 1]
     for first in range(0, paths, lanes):
         fill_draws(registers, words, numbers[first : first + lanes], normals, uniforms, seed, stream)
-        forward(registers, code, scalars, lanes)
         here = min(lanes, paths - first)
+        forward(registers, code, scalars, lanes, here, sums[first // GROUP : (first + lanes) // GROUP])
         for start in range(0, here, GROUP):
             group, count = (first + start) // GROUP, min(GROUP, here - start)
             finite = True
@@ -106,8 +107,8 @@ class Crew:
 
     def run(
         self, numbers: np.ndarray, values: np.ndarray | None = None
-    ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-        """Means, squares and first bad value of each group of the given path numbers, as `sweep` writes them.
+    ) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+        """Means, squares, first bad value and sums of each group of the given path numbers, as `sweep` writes them.
 
         numbers (paths,) uint64; values (paths, outputs) float64 is filled if given.
         """
@@ -116,6 +117,7 @@ class Crew:
         padded = np.concatenate([numbers, np.resize(numbers, blocks * self.lanes - paths)])
         means, squares = np.empty((groups, outputs)), np.empty((groups, outputs))
         bad = np.empty(groups, dtype=np.int64)
+        sums = np.empty((blocks * self.lanes // GROUP, self.code.sums))
         piece = -(-blocks // (self.threads * _TASKS if self._pool else 1)) * self.lanes
 
         def work(first: int) -> None:
@@ -125,13 +127,13 @@ class Crew:
             room = self._rooms.pop()
             sweep(self.code.code, self.code.scalars, self.code.outputs, *self._draws,
                   padded[first : first + piece], last - first, *room,
-                  means[these], squares[these], bad[these], written)  # fmt: skip
+                  means[these], squares[these], bad[these], sums[first // GROUP :], written)  # fmt: skip
             self._rooms.append(room)
 
         firsts = range(0, paths, piece)
         for _ in self._pool.map(work, firsts) if self._pool else map(work, firsts):
             pass
-        return means, squares, bad
+        return means, squares, bad, sums[:groups]
 
     def _room(self) -> tuple[np.ndarray, np.ndarray]:
         """Registers and random words of one thread. Rows begin on cache lines, and are one line longer than

@@ -22,17 +22,16 @@ def forward(registers, code, scalars, lanes, paths, sums):
     sums (groups, sums) float64, written: over each group of 64 lanes, of which the first `paths` count.
     """
     for line in range(code.shape[0]):
-        form = code[line, 0]
-        y = registers[code[line, 1]]
+        form, to = code[line, 0], code[line, 1]
         a, b, c, d = code[line, 2], code[line, 3], code[line, 4], code[line, 5]
         if form < Form.LT_RR:
-            _arithmetic(form, y, registers, scalars, a, b, lanes)
+            _arithmetic(form, registers[to], registers, scalars, a, b, lanes)
         elif form < Form.STEP_RSR:
-            _logic(form, y, registers, scalars, a, b, c, lanes)
+            _logic(form, registers[to], registers, scalars, a, b, c, lanes)
         elif form < Form.SUM_R:
-            _model(form, y, registers, scalars, a, b, c, d, lanes)
+            _model(form, registers[to], registers, scalars, a, b, c, d, lanes)
         else:
-            _sum(form, sums[:, code[line, 1]], registers, a, b, paths)
+            _sum(form, sums[:, to], registers, a, b, paths)
 
 
 @jit

@@ -44,7 +44,7 @@ def prepare(program: Program) -> KernelCode:
     """The kernel's code for a program; takes some microseconds an instruction."""
     writer = _Writer(program)
     for form, destination, operands in _join_drifts(program):
-        if form in (Form.SUM_R, Form.SUM_RR):
+        if isinstance(form, Form) and form >= Form.SUM_R:
             writer.sum(form, destination, operands)
         else:
             writer.instruction(form, destination, operands)
