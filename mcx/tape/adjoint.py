@@ -16,13 +16,12 @@ from typing import TypeAlias
 
 import numpy as np
 
-from mcx.tape.adjoint_rules import ADJOINTS, At, Product
+from mcx.tape.adjoint_rules import ADJOINTS, At, Numbers, Product
 from mcx.tape.builder import Builder
 from mcx.tape.ops import OPS, Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Instruction, Leaf, LeafKind, Sum, Tape
 from mcx.tape.registers import uniform_values
-from mcx.tape.rules import evaluate
 
 Wanted: TypeAlias = Callable[[Leaf], bool]
 Gradient: TypeAlias = dict[int, list[Product]]  # by value that is the same on every path: products that add up
@@ -165,16 +164,6 @@ class _Traits:
         return True
 
 
-class _Numbers:
-    """The algebra of plain numbers, for the part of the sweep that is the same on every path."""
-
-    def constant(self, number: float) -> np.float64:
-        return np.float64(number)
-
-    def emit(self, op: Op, *operands: np.ndarray | float) -> np.ndarray | float:
-        return evaluate(op, *operands)
-
-
 def leaf_sums(
     tape: Tape, leaf_values: Sequence[float] | np.ndarray, sums: np.ndarray, chosen: Iterable[int] | None = None
 ) -> np.ndarray:
@@ -198,7 +187,7 @@ def leaf_sums(
         if step.op is Op.LEAF:
             found[..., column[step.payload]] += bar
             continue
-        at = At(_Numbers(), tuple(known[k] for k in step.operands), known[number], bar, risky=True)
+        at = At(Numbers(), tuple(known[k] for k in step.operands), known[number], bar, risky=True)
         for operand, rule in zip(step.operands, ADJOINTS.get(step.op, ()), strict=True):
             if rule:
                 part = rule(at)

@@ -16,7 +16,10 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any, Protocol
 
+import numpy as np
+
 from mcx.tape.ops import Op
+from mcx.tape.rules import Value, evaluate
 
 
 class Algebra(Protocol):
@@ -24,6 +27,16 @@ class Algebra(Protocol):
 
     def constant(self, number: float) -> Any: ...
     def emit(self, op: Op, *operands: Any) -> Any: ...
+
+
+class Numbers:
+    """The algebra of plain numbers, and of arrays of them."""
+
+    def constant(self, number: float) -> Value:
+        return np.float64(number)
+
+    def emit(self, op: Op, *operands: Value) -> Value:
+        return evaluate(op, *operands)
 
 
 @dataclass(frozen=True, slots=True)
