@@ -32,10 +32,22 @@ class Score:
 
 
 @dataclass(frozen=True, slots=True)
+class Edge:
+    """An extreme of the first step cannot lie within the spot: where the law ends moves with the log spot. What this
+    adds to a derivative is `weight` times the function with `start` in place of `extreme`."""
+
+    asset: int
+    extreme: int
+    start: int
+    weight: int
+
+
+@dataclass(frozen=True, slots=True)
 class Scores:
     """All scores of a tape.
 
     first      by leaf; a leaf may have several, which add up
+    edges      what comes on top by the log spots
     spots      the whole score by the log spot of each asset
     second     (d2 p / dx dy) / p for the log spots of each two assets, both orders; for each asset with itself
     rough      assets whose `second` has no finite variance: a continuous extreme of the first step itself is read
@@ -44,7 +56,8 @@ class Scores:
     first: tuple[Score, ...]
     spots: dict[int, int]
     second: dict[tuple[int, int], int]
-    rough: frozenset[int]
+    edges: tuple[Edge, ...] = ()
+    rough: frozenset[int] = frozenset()
 
 
 def scores(builder: Builder, tape: Tape, grid: Grid, known: Sequence[float | None]) -> Scores:
@@ -89,7 +102,7 @@ class _Scores:
         self.spots: dict[int, int] = {}
         self.precision: dict[tuple[int, int], int] = {}  # the inverse of the first step's covariance
         self.bends: dict[int, int] = {}  # by asset: second derivatives of the log of first bridges' laws
-        self.rough: set[int] = set()
+        self.edges: list[Edge] = []
 
     def all(self) -> Scores:
         emit = self.builder.emit
@@ -98,7 +111,8 @@ class _Scores:
             total = emit(Op.SUB, emit(Op.MUL, self.spots[one], self.spots[other]), inverse)
             second[one, other] = emit(Op.ADD, total, self.bends[one]) if one == other and one in self.bends else total
         spots = [Score(Leaf(LeafKind.LOG_SPOT, asset=asset), value, 1) for asset, value in self.spots.items()]
-        return Scores((*self.first, *spots), self.spots, second, frozenset(self.rough))
+        rough = frozenset(edge.asset for edge in self.edges)
+        return Scores((*self.first, *spots), self.spots, second, tuple(self.edges), rough)
 
     def step(self, number: int) -> None:
         """The scores of one step. Assets beyond the last that moves are left out; one before it that nothing reads any
@@ -154,7 +168,7 @@ class _Scores:
             asset = leaf.asset
             self.spots[asset] = self.builder.emit(Op.ADD, self.spots[asset], by_start)
             if bend is None:
-                self.rough.add(asset)
+                self.edges.append(self._edge(number, asset))
             else:
                 before = self.bends.get(asset)
                 self.bends[asset] = bend if before is None else self.builder.emit(Op.ADD, before, bend)
@@ -191,6 +205,15 @@ class _Scores:
         slope = emit(Op.DIV, constant(-2.0), variance)
         by_start = emit(Op.ADD, emit(Op.DIV, constant(1.0), rest), emit(Op.MUL, emit(Op.SUB, x1, number), slope))
         return by_variance, by_start, None
+
+    def _edge(self, number: int, asset: int) -> Edge:
+        """The density of an extreme where it is the start itself, 2 |x1 - x0| / v, if the other end lies on this side."""
+        emit, constant = self.builder.emit, self.builder.constant
+        step = self.tape.instructions[number]
+        x0, x1, variance, _ = step.operands
+        side = Op.MAX if step.op is Op.BRIDGE_LOW else Op.MIN
+        apart = emit(side, emit(Op.SUB, x1, x0), constant(0.0))
+        return Edge(asset, number, x0, emit(Op.MUL, apart, emit(Op.DIV, constant(2.0), variance)))
 
     def _levels(self, number: int) -> set[int] | None:
         """The log levels that an extreme is compared with, where it is only compared; None where it is read else."""
