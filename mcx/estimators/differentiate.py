@@ -92,7 +92,8 @@ def addends(tape: Tape, value: int) -> list[int]:
 class Differentiator:
     """A tape with the sums that give all derivatives. `derived` and `controls` say which sums are derivatives by leaves
     and which are their controls; `deltas` and `curved` are, for each pair of spots, the sums that its second derivative
-    is made of, with their controls after them, empty where there is none."""
+    is made of, each with its control after it, empty where there is none. `rough`: the second-order score that they need
+    has no finite variance."""
 
     tape: Tape
     contract: Contract
@@ -101,6 +102,7 @@ class Differentiator:
     controls: range
     deltas: tuple[tuple[int, ...], ...]
     curved: tuple[tuple[int, ...], ...]
+    rough: bool
 
     @staticmethod
     def of(tape: Tape, grid: Grid, contract: Contract, known: Sequence[float | None], *, pathwise: Iterable[int],
@@ -114,6 +116,7 @@ class Differentiator:
         derived, controls = list(sums_of(smooth)), []
         law = scores(builder, tape, grid, known) if likelihood or second else Scores((), {}, {})
         later = _later(builder, tape, grid, likelihood)
+        running = _running(builder, tape, grid, likelihood, later)
         if likelihood:
             held = {number for number, step in enumerate(tape.instructions) if step.op in (Op.STEP, *BRIDGES)}
             derived += sums_of(sweep(builder, dict.fromkeys(likelihood, one), of_the_market, held))
@@ -121,7 +124,7 @@ class Differentiator:
                 if score.step in later:
                     leaf = builder.leaf(score.leaf)
                     derived.append(Sum(later[score.step], score.value, leaf))
-                    controls.append(Sum(score.value, None, leaf))
+                    controls.append(Sum(score.value, running[score.step], leaf))
             for edge in law.edges if 1 in later else ():
                 leaf = builder.leaf(Leaf(LeafKind.LOG_SPOT, asset=edge.asset))
                 derived.append(Sum(replaced(builder, later[1], edge.extreme, edge.start), edge.weight, leaf))
@@ -147,7 +150,8 @@ class Differentiator:
             curved.append(score)
         made = finished(builder, tape, (*derived, *controls, *extra))
         return Differentiator(made, contract, grouped(made.leaves), range(len(derived)),
-                              range(len(derived), len(derived) + len(controls)), tuple(deltas), tuple(curved))
+                              range(len(derived), len(derived) + len(controls)), tuple(deltas), tuple(curved),
+                              bool(likelihood and law.edges))
 
     def cost(self, market: Market) -> float:
         """Of one path, by the fixed table of the machine."""
@@ -226,6 +230,35 @@ def _later(builder: Builder, tape: Tape, grid: Grid, payments: Sequence[int]) ->
         count = sum(latest[value] >= number for value in ordered)
         found[number] = totals[count - 1]
     return found
+
+
+def _running(builder: Builder, tape: Tape, grid: Grid, payments: Sequence[int], later: Iterable[int]) -> dict[int, int | None]:
+    """For each step the flag, known before it, without which none of the later payments is made; None for no such flag.
+
+    A score times this flag still has mean zero, and is the better control: where a contract has ended nothing is paid.
+    """
+    latest = latest_steps(tape, grid)
+    conditions = {payment: _conditions(tape, payment) for payment in payments}
+    found: dict[int, int | None] = {}
+    for number in later:
+        due = [set(conditions[payment]) for payment in payments if latest[payment] >= number]
+        common = [flag for flag in sorted(set.intersection(*due)) if latest[flag] < number]
+        found[number] = builder.fold(Op.AND, common) if common else None
+    return found
+
+
+def _conditions(tape: Tape, payment: int) -> list[int]:
+    """Flags that all must hold for a payment not to be 0."""
+    step = tape.instructions[payment]
+    if step.op is Op.SELECT:
+        nothing = tape.instructions[step.operands[2]]
+        return _conjuncts(tape, step.operands[0]) if nothing.op is Op.CONSTANT and nothing.payload == 0.0 else []
+    return []
+
+
+def _conjuncts(tape: Tape, flag: int) -> list[int]:
+    step = tape.instructions[flag]
+    return [part for k in step.operands for part in _conjuncts(tape, k)] if step.op is Op.AND else [flag]
 
 
 def without_first_levels(tape: Tape) -> Tape:

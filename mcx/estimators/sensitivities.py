@@ -47,12 +47,14 @@ class Sensitivity:
 
 @dataclass(frozen=True, slots=True)
 class Curvature:
-    """A gamma, or a cross gamma of two assets: `factor` times the second derivative by the spots at `columns`."""
+    """A gamma, or a cross gamma of two assets: `factor` times the second derivative by the spots at `columns`; `assets`
+    are their numbers in the contract."""
 
     name: str
     subject: str
     unit: str
     columns: tuple[int, int]
+    assets: tuple[int, int]
     factor: float
 
 
@@ -86,8 +88,10 @@ def second_order(numbers: Sequence[Input], contract: Contract) -> Iterator[Curva
     """The gamma of every asset and the cross gamma of every two: the first one's delta as the second's spot moves."""
     spots = [(column, number) for column, number in enumerate(numbers) if number.kind == "spot"]
     unit = f"{contract.currency} per 1 of spot, for 1 %"
-    for column, number in spots:
-        yield Curvature("gamma", number.subject, unit, (column, column), 0.01 * number.value * contract.size)
-    for (column, one), (row, other) in combinations(spots, 2):
-        yield Curvature("cross gamma", f"{one.subject}/{other.subject}", unit, (column, row),
-                        0.01 * other.value * contract.size)
+    for asset, (column, number) in enumerate(spots):
+        factor = 0.01 * number.value * contract.size
+        yield Curvature("gamma", number.subject, unit, (column, column), (asset, asset), factor)
+    for first, second in combinations(range(len(spots)), 2):
+        (column, one), (row, other) = spots[first], spots[second]
+        factor = 0.01 * other.value * contract.size
+        yield Curvature("cross gamma", f"{one.subject}/{other.subject}", unit, (column, row), (first, second), factor)

@@ -53,11 +53,11 @@ class Page:
             grid.add_row(Text(name), Text(text))
         self.console.print(grid)
 
-    def table(self, heads: Sequence[str], rows: Iterable[Sequence[str]], words: int = 1) -> None:
-        """A table whose first `words` columns hold words; the others hold numbers, aligned right."""
+    def table(self, heads: Sequence[str], rows: Iterable[Sequence[str]], words: int = 1, last: int = 0) -> None:
+        """A table whose first `words` columns and `last` columns hold words; the others hold numbers, aligned right."""
         table = Table(box=None, pad_edge=False, padding=(0, 2, 0, 0), header_style="bold")
         for number, head in enumerate(heads):
-            if number < words:
+            if number < words or number >= len(heads) - last:
                 table.add_column(head, overflow="fold")
             else:
                 table.add_column(head, justify=NUMBER, no_wrap=True)
