@@ -12,6 +12,7 @@ score.
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
 from itertools import accumulate, combinations_with_replacement
@@ -82,12 +83,6 @@ def pairs_of(assets: int) -> list[tuple[int, int]]:
     return sorted(every, key=lambda pair: (pair[0] != pair[1], pair))
 
 
-def addends(tape: Tape, value: int) -> list[int]:
-    """What a value is the sum of: the payments of a price."""
-    step = tape.instructions[value]
-    return [part for k in step.operands for part in addends(tape, k)] if step.op is Op.ADD else [value]
-
-
 @dataclass(frozen=True, slots=True)
 class Differentiator:
     """A tape with the sums that give all derivatives. `derived` and `controls` say which sums are derivatives by leaves
@@ -107,19 +102,17 @@ class Differentiator:
     @staticmethod
     def of(tape: Tape, grid: Grid, contract: Contract, known: Sequence[float | None], *, pathwise: Iterable[int],
            likelihood: Iterable[int], second: bool) -> Differentiator:
-        """From a tape whose only output is the price and two lists that share out its addends. `known`: the numbers of
+        """From a tape whose only output is the price and two lists that share out its payments. `known`: the numbers of
         what is the same on every path; `second`: whether second derivatives are taken."""
-        builder = Builder.of(tape)
-        one = builder.constant(1.0)
-        likelihood = list(likelihood)
-        smooth = sweep(builder, dict.fromkeys(pathwise, one), of_the_market)
+        builder, likelihood = Builder.of(tape), list(likelihood)
+        smooth = sweep(builder, _counted(builder, pathwise), of_the_market)
         derived, controls = list(sums_of(smooth)), []
         law = scores(builder, tape, grid, known) if likelihood or second else Scores((), {}, {})
         later = _later(builder, tape, grid, likelihood)
         running = _running(builder, tape, grid, likelihood, later)
         if likelihood:
             held = {number for number, step in enumerate(tape.instructions) if step.op in (Op.STEP, *BRIDGES)}
-            derived += sums_of(sweep(builder, dict.fromkeys(likelihood, one), of_the_market, held))
+            derived += sums_of(sweep(builder, _counted(builder, likelihood), of_the_market, held))
             for score in law.first:
                 if score.step in later:
                     leaf = builder.leaf(score.leaf)
@@ -188,6 +181,11 @@ class Differentiator:
             second[:, pair] /= level[0] * level[1]
             controls[:, pair] /= level[0] * level[1]
         return second, controls
+
+
+def _counted(builder: Builder, values: Iterable[int]) -> dict[int, int]:
+    """How often each value counts, as values of the tape."""
+    return {value: builder.constant(float(count)) for value, count in Counter(values).items()}
 
 
 def _crossed(builder: Builder, delta: int, asset: int, law: Scores) -> list[Sum]:

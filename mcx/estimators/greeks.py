@@ -25,9 +25,9 @@ from mcx.estimators.price import Ready
 from mcx.estimators.revalue import Revaluer, central_differences, impossible, second_differences, step_of
 from mcx.estimators.sensitivities import Curvature, Sensitivity, first_order, second_order
 from mcx.estimators.theta import between, theta
-from mcx.faults import Place
 from mcx.leaves.jacobian import Input, inputs, without_derivative
 from mcx.machine.run import Notice, Stream, values_by_path
+from mcx.tape.smooth import Jump
 
 PILOT_PATHS = 1 << 14
 ESTIMATORS = ("auto", "pathwise", "likelihood", "mixed")
@@ -64,7 +64,7 @@ class Found:
     refused: tuple[tuple[Sensitivity | Curvature, str], ...]
     comparison: tuple[Value, ...]
     choices: tuple[str, ...]
-    jumps: tuple[Place, ...]
+    jumps: tuple[Jump, ...]
     ladder: tuple[Step, ...]
     grid: tuple[Point, ...]
     notes: tuple[str, ...]

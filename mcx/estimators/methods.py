@@ -7,15 +7,15 @@ from dataclasses import dataclass, replace
 
 from mcx.checked.contract import Contract
 from mcx.checked.market import Market
-from mcx.estimators.differentiate import Differentiator, addends, without_first_levels
+from mcx.estimators.differentiate import Differentiator, without_first_levels
 from mcx.estimators.price import Ready
-from mcx.faults import Place, Refusal
+from mcx.faults import Refusal
 from mcx.leaves.market_map import MarketMap
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Instruction, Leaf, LeafKind, Tape
 from mcx.tape.registers import uniform_values
-from mcx.tape.smooth import jumps
+from mcx.tape.smooth import Jump, jumps, payments
 
 PATHWISE, LIKELIHOOD, MIXED = "pathwise", "likelihood ratio", "mixed"
 GAMMAS = {PATHWISE: "likelihood ratio of the pathwise delta", LIKELIHOOD: "second-order likelihood ratio",
@@ -40,10 +40,10 @@ class Method:
 
 @dataclass(frozen=True, slots=True)
 class Methods:
-    """The valid estimators, the pathwise one first, and the places of the conditions that make payments jump."""
+    """The valid estimators, the pathwise one first, and what makes payments jump."""
 
     valid: tuple[Method, ...]
-    jumps: tuple[Place, ...]
+    jumps: tuple[Jump, ...]
     reason: str  # why there is none
 
     def for_kind(self, kind: str) -> tuple[Method, ...]:
@@ -62,11 +62,11 @@ def methods(ready: Ready, market: Market, asked: str) -> Methods:
     tape = without_first_levels(drop_dead_code(replace(unrolled.tape, outputs=(price,), sums=())))
     values = MarketMap(market, contract).values(tape.leaves)
     known = uniform_values(tape, values)
-    payments = addends(tape, tape.outputs[0].value)
-    found = {payment: jumps(tape, payment) for payment in payments}
-    jumping = [payment for payment in payments if found[payment]]
-    smooth = [payment for payment in payments if not found[payment]]
-    places = tuple(dict.fromkeys(jump.place for payment in jumping for jump in found[payment]))
+    paid = payments(tape, tape.outputs[0].value)
+    found = dict(zip(paid, jumps(tape, values, paid), strict=True))
+    jumping = [payment for payment in paid if found[payment]]
+    smooth = [payment for payment in paid if not found[payment]]
+    places = tuple({(jump.kind, jump.place): jump for payment in jumping for jump in found[payment]}.values())
     still = without_own_randomness(tape, dict(zip(tape.leaves, values, strict=True)), contract)
 
     def method(name: str, pathwise: list[int], likelihood: list[int]) -> Method:
@@ -93,7 +93,7 @@ def methods(ready: Ready, market: Market, asked: str) -> Methods:
     few = tape.normals + tape.uniforms <= MOST_DRAWS
     wanted = {"pathwise": False, "likelihood": True, "mixed": not valid, "auto": bool(jumping) or few}[asked]
     if wanted and not still:
-        valid.append(method(LIKELIHOOD, [], payments))
+        valid.append(method(LIKELIHOOD, [], list(paid)))
     return Methods(tuple(valid), places, reason)
 
 
@@ -132,6 +132,7 @@ def _is_today(step: Instruction) -> bool:
     return step.op is Op.LEAF and step.payload.kind is LeafKind.FORWARD
 
 
-def _listed(places: Sequence[Place]) -> str:
-    shown = [str(place) for place in places[:3]]
-    return ", ".join(shown) + (f" and {len(places) - 3} more" if len(places) > 3 else "")
+def _listed(found: Sequence[Jump]) -> str:
+    """Where a payoff jumps, at most three places."""
+    shown = [f"{jump.place or 'an unnamed place'} ({jump.kind})" for jump in found[:3]]
+    return ", ".join(shown) + (f" and {len(found) - 3} more" if len(found) > 3 else "")

@@ -42,8 +42,9 @@ class Refused(Result):
 
 @dataclass(frozen=True, slots=True)
 class Jump(Result):
-    """A condition at which a payment jumps: where in which file it stands."""
+    """What makes a payment jump: a 'condition', or a 'division' by what may be 0, and where in which file it stands."""
 
+    kind: str
     place: str
 
 

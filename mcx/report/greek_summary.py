@@ -49,7 +49,7 @@ def greeks_result(ready: Ready, market: Market, wish: Wish, found: Found) -> Gre
         refused=tuple(Refused(what.name, what.subject, _tenor(what), reason) for what, reason in found.refused),
         comparison=tuple(map(_greek, found.comparison)),
         choices=found.choices,
-        jumps=tuple(Jump(str(place)) for place in found.jumps),
+        jumps=tuple(Jump(jump.kind, str(jump.place or "")) for jump in found.jumps),
         ladder=tuple(_rung(step, assets, contract.size) for step in found.ladder),
         grid=tuple(_point(point, contract.size) for point in found.grid),
         warnings=tuple(_warnings(found)),

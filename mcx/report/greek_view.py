@@ -35,8 +35,8 @@ def show_greeks(result: GreeksResult, page: Page) -> None:
         page.heading("for comparison: revaluation on the same random numbers, biased by the size of the move")
         page.table(("", "value", "error", "unit", ""), (_row(greek, greek.note) for greek in result.comparison), last=2)
     if result.jumps:
-        page.heading("the payoff jumps at these conditions: no pathwise estimate of the payments behind them")
-        page.items(jump.place for jump in result.jumps)
+        page.heading("the payoff jumps here: no pathwise estimate of the payments behind it")
+        page.items(f"{jump.kind} at {jump.place or 'an unnamed place'}" for jump in result.jumps)
     if result.ladder:
         page.heading("spots moved together, same random numbers")
         heads = [f"delta {delta.asset}" for delta in result.ladder[0].deltas]
