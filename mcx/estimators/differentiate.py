@@ -30,7 +30,7 @@ from mcx.machine.sizes import cost
 from mcx.tape.adjoint import Gradient, finished, leaf_sums, of_the_market, on_paths, sums_of, sweep
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
-from mcx.tape.program import Leaf, LeafKind, Sum, Tape
+from mcx.tape.program import Leaf, LeafKind, Program, Sum, Tape
 from mcx.tape.registers import lower, uniform_values
 from mcx.tape.scores import BRIDGES, Scores, latest_steps, scores
 from mcx.tape.steps import Grid
@@ -49,7 +49,8 @@ class Derivatives:
     """What one run finds, by parts of the run, without the controls and the controls beside it.
 
     paths (64,); first and its control (64, numbers): by the inputs in their order; second (64, pairs) and its controls
-    (64, pairs, controls): by the pairs of spots, each asset with itself first; the price of the same paths.
+    (64, pairs, controls): by the pairs of spots, each asset with itself first; the price of the same paths, by parts
+    (64, 1) and as a whole.
     """
 
     paths: np.ndarray
@@ -57,6 +58,7 @@ class Derivatives:
     control: np.ndarray
     second: np.ndarray
     controls: np.ndarray
+    base: np.ndarray
     price: Estimate
 
     def fitted(self) -> Coefficients:
@@ -87,8 +89,8 @@ def pairs_of(assets: int) -> list[tuple[int, int]]:
 class Differentiator:
     """A tape with the sums that give all derivatives. `derived` and `controls` say which sums are derivatives by leaves
     and which are their controls; `deltas` and `curved` are, for each pair of spots, the sums that its second derivative
-    is made of, each with its control after it, empty where there is none. `rough`: the second-order score that they need
-    has no finite variance."""
+    is made of, each with its control after it, empty where there is none. The last sum is the price. `rough`: the
+    second-order score that they need has no finite variance."""
 
     tape: Tape
     contract: Contract
@@ -107,8 +109,8 @@ class Differentiator:
         builder, likelihood = Builder.of(tape), list(likelihood)
         smooth = sweep(builder, _counted(builder, pathwise), of_the_market)
         derived, controls = list(sums_of(smooth)), []
-        law = scores(builder, tape, grid, known) if likelihood or second else Scores((), {}, {})
         later = _later(builder, tape, grid, likelihood)
+        law = scores(builder, tape, grid, known, max(later, default=min(1, len(grid.times) - 1)))
         running = _running(builder, tape, grid, likelihood, later)
         if likelihood:
             held = {number for number, step in enumerate(tape.instructions) if step.op in (Op.STEP, *BRIDGES)}
@@ -141,40 +143,55 @@ class Differentiator:
                     score = noted(Sum(later[1], bend), Sum(bend))
             deltas.append(crossed)
             curved.append(score)
+        noted(Sum(tape.outputs[0].value))
         made = finished(builder, tape, (*derived, *controls, *extra))
         return Differentiator(made, contract, grouped(made.leaves), range(len(derived)),
                               range(len(derived), len(derived) + len(controls)), tuple(deltas), tuple(curved),
                               bool(likelihood and law.edges))
 
-    def cost(self, market: Market) -> float:
-        """Of one path, by the fixed table of the machine."""
-        return cost(lower(self.tape, MarketMap(market, self.contract).values(self.leaves)))
-
-    def derivatives(self, market: Market, sampling: Sampling) -> Derivatives:
-        """One run. Raises what `Sampling.sums` raises."""
+    def on(self, market: Market) -> Bound:
+        """The tape on a market, ready to run."""
         values = MarketMap(market, self.contract).values(self.leaves)
-        sums, price = sampling.sums(lower(self.tape, values))
-        by_number = jacobian(market, self.contract, self.tape.leaves)
-        first, control = (leaf_sums(self.tape, values, sums.means, chosen) @ by_number
-                          for chosen in (self.derived, self.controls))
-        second, controls = self._second(market, sums.means, first, control)
-        return Derivatives(sums.paths, first, control, second, controls, price)
+        return Bound(self, market, values, lower(self.tape, values), jacobian(market, self.contract, self.tape.leaves))
 
-    def _second(self, market: Market, sums: np.ndarray, first: np.ndarray,
-                control: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+
+@dataclass(frozen=True, slots=True)
+class Bound:
+    """A differentiator on one market."""
+
+    of: Differentiator
+    market: Market
+    values: np.ndarray
+    program: Program
+    by_number: np.ndarray
+
+    def cost(self) -> float:
+        """Of one path, by the fixed table of the machine."""
+        return cost(self.program)
+
+    def derivatives(self, sampling: Sampling) -> Derivatives:
+        """One run. Raises what `Sampling.sums` raises."""
+        sums, price = sampling.sums(self.program)
+        first, control = (leaf_sums(self.of.tape, self.values, sums.means, chosen) @ self.by_number
+                          for chosen in (self.of.derived, self.of.controls))
+        second, controls = self._second(sums.means, first, control)
+        return Derivatives(sums.paths, first, control, second, controls, sums.means[:, -1:], price)
+
+    def _second(self, sums: np.ndarray, first: np.ndarray, control: np.ndarray
+                ) -> tuple[np.ndarray, np.ndarray]:
         """Second derivatives by the spots out of those by their logs, and the controls of them."""
-        numbers = inputs(market, self.contract)
+        deltas, numbers = self.of.deltas, inputs(self.market, self.of.contract)
         spots = [column for column, number in enumerate(numbers) if number.kind == "spot"]
-        second, controls = np.zeros((len(sums), len(self.deltas))), np.zeros((len(sums), len(self.deltas), 4))
-        for pair, (one, other) in enumerate(pairs_of(len(spots))[: len(self.deltas)]):
+        second, controls = np.zeros((len(sums), len(deltas))), np.zeros((len(sums), len(deltas), 4))
+        for pair, (one, other) in enumerate(pairs_of(len(spots))[: len(deltas)]):
             level = [numbers[spots[asset]].value for asset in (one, other)]
-            if self.deltas[pair]:
-                for side, found in enumerate(np.split(sums[:, list(self.deltas[pair])], 2, axis=1)):
+            if deltas[pair]:
+                for side, found in enumerate(np.split(sums[:, list(deltas[pair])], 2, axis=1)):
                     second[:, pair] += 0.5 * found[:, 0::2].sum(axis=1)
                     controls[:, pair, side] = found[:, 1::2].sum(axis=1)
-            if self.curved[pair]:
-                second[:, pair] += sums[:, self.curved[pair][0]]
-                controls[:, pair, 2] = sums[:, self.curved[pair][1]]
+            if self.of.curved[pair]:
+                second[:, pair] += sums[:, self.of.curved[pair][0]]
+                controls[:, pair, 2] = sums[:, self.of.curved[pair][1]]
             if one == other:
                 second[:, pair] -= level[0] * first[:, spots[one]]
                 controls[:, pair, 3] = level[0] * control[:, spots[one]]

@@ -16,10 +16,10 @@ import numpy as np
 
 from mcx.checked.market import Market
 from mcx.estimators.batches import FEWEST_PATHS, Batches, Sampling
-from mcx.estimators.differentiate import Coefficients, pairs_of
+from mcx.estimators.differentiate import Bound, Coefficients, pairs_of
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.ladder import Point, Step, grid, ladder
-from mcx.estimators.methods import Method, methods
+from mcx.estimators.methods import PATHWISE, Method, methods
 from mcx.estimators.plan import Plan, Precision, plan
 from mcx.estimators.price import Ready
 from mcx.estimators.revalue import Revaluer, central_differences, impossible, second_differences, step_of
@@ -30,6 +30,7 @@ from mcx.machine.run import Notice, Stream, values_by_path
 from mcx.tape.smooth import Jump
 
 PILOT_PATHS = 1 << 14
+NEAR = 1.0 / 12.0  # years
 ESTIMATORS = ("auto", "pathwise", "likelihood", "mixed")
 REVALUATION = "revaluation"
 
@@ -104,13 +105,14 @@ class _Run:
         self.curvatures = [line for line in second_order(self.numbers, self.contract) if self._wanted(line.subject)]
         self.methods = methods(ready, market, wish.estimator)
         self.pilot = Sampling(seed, PILOT_PATHS, Stream.PILOT, threads, notice=notice)
+        self.bound: dict[str, Bound] = {}
         self.plan = self._plan(asked)
         counted = progress and (lambda done, _, error: progress(done, self.plan.paths, error))
         self.sampling = Sampling(seed, self.plan.paths, Stream.MAIN, threads, counted, notice)
         self.revaluer = Revaluer.of(ready.unrolled.tape, self.contract)
         self.piloted: dict[str, tuple[Coefficients, Batches, Batches]] = {}
         self.done: dict[str, tuple[Batches, Batches]] = {}
-        self.price: Estimate | None = None
+        self.base: tuple[Batches, Estimate] | None = None  # the price of the main run
         self.choices: list[str] = []
         self.refused: list[tuple[Sensitivity | Curvature, str]] = []
 
@@ -119,13 +121,13 @@ class _Run:
         kinks = {self.numbers.index(number): reason
                  for number, reason in without_derivative(self.market, self.contract).items()}
         values = [*self._first(kinks), *self._second()]
-        price = self.price or self.revaluer.price(self.market, self.sampling)[1]
-        values.append(self._theta())
-        comparison, notes = self._comparison()
-        rungs = self._ladder()
+        base, price = self.base or self.revaluer.price(self.market, self.sampling)
+        values.append(self._theta(base))
+        comparison, notes = self._comparison(base)
+        rungs = self._ladder(base)
         points = grid(self.revaluer, self.market, self._moving(), self.wish.spot_moves or (0.0,), self.wish.vol_moves,
-                      self.sampling) if self.wish.vol_moves else ()
-        notes += between(self.ready.dated)
+                      self.sampling, base) if self.wish.vol_moves else ()
+        notes += [*between(self.ready.dated), *self._near(values)]
         return Found(price, tuple(values), tuple(self.refused), tuple(comparison), tuple(self.choices),
                      self.methods.jumps, rungs, points, tuple(notes), self.plan, self.sampling.seed, time.perf_counter() - begun)
 
@@ -144,16 +146,22 @@ class _Run:
         def seconds_for(paths: int) -> float:
             begun = time.perf_counter()
             for method in self.methods.valid:
-                method.engine.derivatives(self.market, replace(self.pilot, paths=max(paths, FEWEST_PATHS)))
+                self._bound(method).derivatives(replace(self.pilot, paths=max(paths, FEWEST_PATHS)))
             return time.perf_counter() - begun
 
         found = plan(asked, prices, seconds_for, exact=program.outputs[0] < 0)
         return replace(found, paths=max(found.paths, FEWEST_PATHS))
 
+    def _bound(self, method: Method) -> Bound:
+        """A method's tape on the market as it stands."""
+        if method.name not in self.bound:
+            self.bound[method.name] = method.engine.on(self.market)
+        return self.bound[method.name]
+
     def _pilot(self, method: Method) -> tuple[Coefficients, Batches, Batches]:
         """The coefficients of a method's controls, and what it finds on the pilot; each runs once."""
         if method.name not in self.piloted:
-            found = method.engine.derivatives(self.market, self.pilot)
+            found = self._bound(method).derivatives(self.pilot)
             coefficients = found.fitted()
             self.piloted[method.name] = (coefficients, *found.with_controls(coefficients))
         return self.piloted[method.name]
@@ -161,9 +169,9 @@ class _Run:
     def _main(self, method: Method) -> tuple[Batches, Batches]:
         """First and second derivatives by a method, from the main run."""
         if method.name not in self.done:
-            found = method.engine.derivatives(self.market, self.sampling)
+            found = self._bound(method).derivatives(self.sampling)
             self.done[method.name] = found.with_controls(self._pilot(method)[0])
-            self.price = found.price
+            self.base = Batches(found.paths, found.base), found.price
         return self.done[method.name]
 
     def _first(self, kinks: Mapping[int, str]) -> Iterator[Value]:
@@ -202,23 +210,30 @@ class _Run:
         valid = self.methods.for_kind(kind)
         if len(valid) < 2:
             return valid[0] if valid else None
-        burden = {method.name: estimate(self._pilot(method)).standard_error**2 * method.cost for method in valid}
+        burden = {method.name: estimate(self._pilot(method)).standard_error**2 * self._bound(method).cost() for method in valid}
         best = min(valid, key=lambda method: burden[method.name])
         others = ", ".join(f"{_times(burden[method.name], burden[best.name])} {method.name}" for method in valid
                            if method is not best)
         self.choices.append(f"{words}: {best.name}; variance times cost in the pilot: {others}")
         return best
 
-    def _theta(self) -> Value:
+    def _theta(self, base: Batches) -> Value:
         line = Sensitivity("theta", "", "1 day", f"{self.contract.currency} per calendar day", (), ())
-        estimate = theta(self.ready.dated, self.market, self.sampling).estimate(np.array([self.contract.size]))
+        estimate = theta(self.ready, self.market, self.sampling, base).estimate(np.array([self.contract.size]))
         return Value(line, estimate, REVALUATION, "the document read one calendar day on")
+
+    def _near(self, values: list[Value]) -> Iterator[str]:
+        """A word about a first date so near that likelihood ratios scatter."""
+        first = self.ready.unrolled.grid.times[1:2]
+        if first and first[0] < NEAR and any(value.what.name == "delta" and value.estimator != PATHWISE for value in values):
+            yield (f"the first simulated date is only {365.0 * first[0]:.3g} days away: the error of a likelihood ratio's "
+                   f"delta grows as the root of that time shrinks, that of its gamma as the time itself does")
 
     def _moving(self) -> list[Input]:
         """The numbers that a ladder or a grid moves: spots and vols of the assets asked for."""
         return [number for number in self.numbers if number.kind in ("spot", "vol") and self._wanted(number.subject)]
 
-    def _comparison(self) -> tuple[list[Value], list[str]]:
+    def _comparison(self, base: Batches) -> tuple[list[Value], list[str]]:
         """The same sensitivities by revaluation, where a bump was asked for."""
         size, notes, values = self.wish.bump, [], []
         if size is None:
@@ -242,14 +257,14 @@ class _Run:
                 values.append(Value(line, found.estimate(weights), REVALUATION, _bumped(self.numbers[line.columns[0]], size)))
         if self.curvatures:
             pairs = [tuple(self.numbers[column] for column in line.columns) for line in self.curvatures]
-            second = second_differences(self.revaluer, self.market, pairs, size, self.sampling)
+            second = second_differences(self.revaluer, self.market, pairs, size, self.sampling, base)
             for number, line in enumerate(self.curvatures):
                 weights = np.zeros(len(pairs))
                 weights[number] = line.factor
                 values.append(Value(line, second.estimate(weights), REVALUATION, _bumped(pairs[number][0], size)))
         return values, notes
 
-    def _ladder(self) -> tuple[Step, ...]:
+    def _ladder(self, base: Batches) -> tuple[Step, ...]:
         if not self.wish.spot_moves:
             return ()
         spots = [column for column, number in enumerate(self.numbers)
@@ -260,10 +275,10 @@ class _Run:
         def deltas(market: Market) -> Batches | None:
             if method is None:
                 return None
-            found = method.engine.derivatives(market, self.sampling).with_controls(self._pilot(method)[0])[0]
+            found = method.engine.on(market).derivatives(self.sampling).with_controls(self._pilot(method)[0])[0]
             return Batches(found.paths, found.means[:, spots])
 
-        return ladder(self.revaluer, self.market, self._moving(), self.wish.spot_moves, self.sampling, deltas)
+        return ladder(self.revaluer, self.market, self._moving(), self.wish.spot_moves, self.sampling, base, deltas)
 
 
 def _times(burden: float, best: float) -> str:

@@ -30,7 +30,6 @@ class Method:
 
     name: str
     engine: Differentiator
-    cost: float
     refusals: dict[str, str]
 
     @property
@@ -77,7 +76,7 @@ def methods(ready: Ready, market: Market, asked: str) -> Methods:
             refusals["spot"] = reason
         if reason := still or second_order_trouble(tape, engine):
             refusals["gamma"] = reason
-        return Method(name, engine, engine.cost(market), refusals)
+        return Method(name, engine, refusals)
 
     reason = f"the payoff jumps, and {still}" if still else ""
     if asked == "pathwise" and jumping:

@@ -95,10 +95,10 @@ def central_differences(
 
 
 def second_differences(
-    revaluer: Revaluer, market: Market, pairs: Sequence[tuple[Input, Input]], size: float, sampling: Sampling
+    revaluer: Revaluer, market: Market, pairs: Sequence[tuple[Input, Input]], size: float, sampling: Sampling,
+    base: Batches,
 ) -> Batches:
-    """The second derivatives by the two spots of each pair, on the same paths."""
-    base, _ = revaluer.price(market, sampling)
+    """The second derivatives by the two spots of each pair, on the same paths; `base` is the price as it stands."""
     known: dict[tuple[tuple[Input, float], ...], np.ndarray] = {}
 
     def at(*shifts: tuple[Input, float]) -> np.ndarray:

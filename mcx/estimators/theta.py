@@ -12,23 +12,28 @@ from collections.abc import Iterator
 from mcx.checked.market import Market
 from mcx.dates.dated_contract import DatedContract, Moment
 from mcx.estimators.batches import Batches, Sampling
+from mcx.estimators.price import Ready
 from mcx.estimators.revalue import Revaluer
-from mcx.leaves.market_map import MarketMap
 from mcx.tape.unroll import unroll
 
 DAY = 1.0 / 365.0
 SAME_TIME = 1e-9
 
 
-def theta(dated: DatedContract, market: Market, sampling: Sampling) -> Batches:
-    """The price one calendar day on less the price today, in the price's unit, as a single quantity.
+def theta(ready: Ready, market: Market, sampling: Sampling, base: Batches) -> Batches:
+    """The price one calendar day on less the price today, in the price's unit, as a single quantity; `base` is the price
+    today on the same paths.
 
-    Watched stretches are split where the curves bend on either day, so that the bridges of both are exact.
+    Watched stretches are split where the curves bend on either day, so that the bridges of both are exact; then the price
+    today is taken on that grid as well.
     """
-    nodes = MarketMap(market, dated.contract).nodes()
-    tape = unroll(dated, nodes=sorted({*nodes, *(node + DAY for node in nodes)})).tape
-    today, tomorrow = (Revaluer.of(tape, dated.contract, later).price(market, sampling)[0] for later in (0.0, DAY))
-    return Batches(today.paths, tomorrow.means - today.means)
+    contract, tape = ready.dated.contract, ready.unrolled.tape
+    if ready.dated.watches:
+        nodes = ready.market.nodes()
+        tape = unroll(ready.dated, nodes=sorted({*nodes, *(node + DAY for node in nodes)})).tape
+        base, _ = Revaluer.of(tape, contract).price(market, sampling)
+    tomorrow, _ = Revaluer.of(tape, contract, later=DAY).price(market, sampling)
+    return Batches(base.paths, tomorrow.means - base.means)
 
 
 def between(dated: DatedContract) -> Iterator[str]:

@@ -49,27 +49,26 @@ class Scores:
     first      by leaf; a leaf may have several, which add up
     edges      what comes on top by the log spots
     spots      the whole score by the log spot of each asset
-    second     (d2 p / dx dy) / p for the log spots of each two assets, both orders; for each asset with itself
-    rough      assets whose `second` has no finite variance: a continuous extreme of the first step itself is read
+    second     (d2 p / dx dy) / p for the log spots of each two assets, both orders; for each asset with itself. Where there
+               are edges it is not complete, and would have no finite variance
     """
 
     first: tuple[Score, ...]
     spots: dict[int, int]
     second: dict[tuple[int, int], int]
     edges: tuple[Edge, ...] = ()
-    rough: frozenset[int] = frozenset()
 
 
-def scores(builder: Builder, tape: Tape, grid: Grid, known: Sequence[float | None]) -> Scores:
-    """The scores of a tape's leaves, appended to `builder`, which goes on where the tape ends.
+def scores(builder: Builder, tape: Tape, grid: Grid, known: Sequence[float | None], last: int) -> Scores:
+    """The scores of a tape's leaves up to step `last`, appended to `builder`, which goes on where the tape ends.
 
     known   for each value of the tape the number that it is on every path, or None (`registers.uniform_values`)
     """
     made = _Scores(builder, tape, grid, known)
-    for number in range(1, len(grid.times)):
+    for number in range(1, last + 1):
         made.step(number)
     for number, step in enumerate(tape.instructions):
-        if step.op in BRIDGES:
+        if step.op in BRIDGES and made.step_of(number) <= last:
             made.bridge(number)
     return made.all()
 
@@ -111,8 +110,11 @@ class _Scores:
             total = emit(Op.SUB, emit(Op.MUL, self.spots[one], self.spots[other]), inverse)
             second[one, other] = emit(Op.ADD, total, self.bends[one]) if one == other and one in self.bends else total
         spots = [Score(Leaf(LeafKind.LOG_SPOT, asset=asset), value, 1) for asset, value in self.spots.items()]
-        rough = frozenset(edge.asset for edge in self.edges)
-        return Scores((*self.first, *spots), self.spots, second, tuple(self.edges), rough)
+        return Scores((*self.first, *spots), self.spots, second, tuple(self.edges))
+
+    def step_of(self, bridge: int) -> int:
+        """The number of the step that a bridge spans."""
+        return self.numbers[self.tape.instructions[self.tape.instructions[bridge].operands[2]].payload.end]
 
     def step(self, number: int) -> None:
         """The scores of one step. Assets beyond the last that moves are left out; one before it that nothing reads any
@@ -163,7 +165,7 @@ class _Scores:
             self._crossing(number, levels.pop()) if levels else (None, None, None)
         if by_variance is None:  # nobody reads it
             return
-        self.first.append(Score(leaf, by_variance, self.numbers[leaf.end]))
+        self.first.append(Score(leaf, by_variance, self.step_of(number)))
         if self.tape.instructions[start].op is Op.LEAF:  # the log spot
             asset = leaf.asset
             self.spots[asset] = self.builder.emit(Op.ADD, self.spots[asset], by_start)
