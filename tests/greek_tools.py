@@ -47,7 +47,7 @@ def slope(value: Callable[..., float], at: Mapping[str, float], by: str, step: f
                for k, w in weights.items()) / (60.0 * h)
 
 
-def bend(value: Callable[..., float], at: Mapping[str, float], by: str, step: float = 2e-2) -> float:
+def bend(value: Callable[..., float], at: Mapping[str, float], by: str, step: float = 6e-3) -> float:
     """d2 value / d `by`2, likewise."""
     h = step * abs(at[by])
     weights = {1: 270.0, 2: -27.0, 3: 2.0}

@@ -89,7 +89,8 @@ def pairs_of(assets: int) -> list[tuple[int, int]]:
 class Differentiator:
     """A tape with the sums that give all derivatives. `derived` and `controls` say which sums are derivatives by leaves
     and which are their controls; `deltas` and `curved` are, for each pair of spots, the sums that its second derivative
-    is made of, each with its control after it, empty where there is none. The last sum is the price. `rough`: the
+    is made of, each with its control after it, empty where there is none. `tied` are by asset the
+    sums of both estimates of the pathwise part's delta, whose difference is a control. The last sum is the price. `rough`: the
     second-order score that they need has no finite variance."""
 
     tape: Tape
@@ -99,6 +100,7 @@ class Differentiator:
     controls: range
     deltas: tuple[tuple[int, ...], ...]
     curved: tuple[tuple[int, ...], ...]
+    tied: dict[int, tuple[int, ...]]
     rough: bool
 
     @staticmethod
@@ -106,7 +108,7 @@ class Differentiator:
            likelihood: Iterable[int], second: bool) -> Differentiator:
         """From a tape whose only output is the price and two lists that share out its payments. `known`: the numbers of
         what is the same on every path; `second`: whether second derivatives are taken."""
-        builder, likelihood = Builder.of(tape), list(likelihood)
+        builder, pathwise, likelihood = Builder.of(tape), list(pathwise), list(likelihood)
         smooth = sweep(builder, _counted(builder, pathwise), of_the_market)
         derived, controls = list(sums_of(smooth)), []
         later = _later(builder, tape, grid, likelihood)
@@ -125,6 +127,8 @@ class Differentiator:
                 derived.append(Sum(replaced(builder, later[1], edge.extreme, edge.start), edge.weight, leaf))
                 controls.append(Sum(edge.weight, None, leaf))
         deltas, curved, extra = [], [], []
+        tied: dict[int, tuple[int, ...]] = {}
+        total = builder.fold(Op.ADD, pathwise) if pathwise else builder.constant(0.0)
 
         def noted(*sums: Sum) -> tuple[int, ...]:
             first = len(derived) + len(controls) + len(extra)
@@ -138,6 +142,9 @@ class Differentiator:
                     both = [_crossed(builder, _by_log_spot(builder, tape, smooth, one), other, law)
                             for one, other in (pair, pair[::-1])]
                     crossed = noted(*both[0], *both[1])
+                    if pair[0] == pair[1] and pair[0] not in tied:
+                        delta = _by_log_spot(builder, tape, smooth, pair[0])
+                        tied[pair[0]] = noted(*_crossed(builder, total, pair[0], law), Sum(delta))
                 if 1 in later:
                     bend = law.second[pair]
                     score = noted(Sum(later[1], bend), Sum(bend))
@@ -146,7 +153,7 @@ class Differentiator:
         noted(Sum(tape.outputs[0].value))
         made = finished(builder, tape, (*derived, *controls, *extra))
         return Differentiator(made, contract, grouped(made.leaves), range(len(derived)),
-                              range(len(derived), len(derived) + len(controls)), tuple(deltas), tuple(curved),
+                              range(len(derived), len(derived) + len(controls)), tuple(deltas), tuple(curved), tied,
                               bool(likelihood and law.edges))
 
     def on(self, market: Market) -> Bound:
@@ -182,7 +189,7 @@ class Bound:
         """Second derivatives by the spots out of those by their logs, and the controls of them."""
         deltas, numbers = self.of.deltas, inputs(self.market, self.of.contract)
         spots = [column for column, number in enumerate(numbers) if number.kind == "spot"]
-        second, controls = np.zeros((len(sums), len(deltas))), np.zeros((len(sums), len(deltas), 4))
+        second, controls = np.zeros((len(sums), len(deltas))), np.zeros((len(sums), len(deltas), 5))
         for pair, (one, other) in enumerate(pairs_of(len(spots))[: len(deltas)]):
             level = [numbers[spots[asset]].value for asset in (one, other)]
             if deltas[pair]:
@@ -195,6 +202,9 @@ class Bound:
             if one == other:
                 second[:, pair] -= level[0] * first[:, spots[one]]
                 controls[:, pair, 3] = level[0] * control[:, spots[one]]
+                if one in self.of.tied:
+                    *by_score, delta = self.of.tied[one]
+                    controls[:, pair, 4] = sums[:, by_score[0::2]].sum(axis=1) - sums[:, delta]
             second[:, pair] /= level[0] * level[1]
             controls[:, pair] /= level[0] * level[1]
         return second, controls
