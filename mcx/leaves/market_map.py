@@ -1,13 +1,13 @@
 """From the market document to the tape's leaves: a small, smooth, deterministic map.
 
 Each leaf is an exact integral of the market's curves over one step, or a term of the contract. The map knows nothing of
-payoffs; its derivative by every number of the market document belongs here as well, when sensitivities are asked for.
+payoffs. It works on all leaves of one kind at once and holds for complex numbers too, so that a complex step through it
+gives its derivative by every number of the market document (`jacobian.py`).
 """
 
 from __future__ import annotations
 
-import math
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 
 import numpy as np
 
@@ -15,6 +15,7 @@ from mcx.checked.contract import Contract
 from mcx.checked.market import Market
 from mcx.leaves.correlation import correlation_matrix, lower_factor
 from mcx.leaves.curves import LogCurve, log_curve
+from mcx.leaves.grouped import Factors, Group, Grouped, grouped
 from mcx.leaves.vols import VolCurve, covariance_integral, vol_curve
 from mcx.tape.formulas import figure
 from mcx.tape.program import Leaf, LeafKind
@@ -50,15 +51,15 @@ class MarketMap:
     def forward(self, asset: str, time: float) -> float:
         """The forward of an asset; the spot at time 0."""
         number = self.contract.assets.index(asset)
-        return self._spots[number] * math.exp(self._growth(number, time))
+        return float(self._spots[number] * np.exp(self._growth(number, time)))
 
     def discount(self, time: float) -> float:
         """The discount factor of the contract's currency, without funding."""
-        return self._rates.factor(time)
+        return float(self._rates.factor(time))
 
-    def funded_discount(self, time: float) -> float:
+    def funded_discount(self, time: float | np.ndarray) -> np.number | np.ndarray:
         """The discount factor for the issuer's payments: the funding spread added to the zero rate."""
-        return math.exp(self._rates.log(time) + self._funding.log(time))
+        return np.exp(self._rates.log(time) + self._funding.log(time))
 
     def vol_to(self, asset: str, time: float) -> float:
         """The Black vol of an asset to a time."""
@@ -69,60 +70,57 @@ class MarketMap:
         names = self.contract.assets
         return float(self._correlation[names.index(first), names.index(second)])
 
-    def values(self, leaves: Iterable[Leaf]) -> np.ndarray:
+    def values(self, leaves: Iterable[Leaf] | Grouped) -> np.ndarray:
         """The leaves' values, shape (leaves,)."""
-        leaves = tuple(leaves)
-        factors = self._factors(leaves)
-        return np.array([factors[leaf] if leaf in factors else self._value(leaf) for leaf in leaves], dtype=np.float64)
+        leaves = leaves if isinstance(leaves, Grouped) else grouped(leaves)
+        found = [(group.positions, self._values(group)) for group in leaves.groups]
+        found += [(factors.positions, self._factors(factors)) for factors in leaves.factors]
+        values = np.empty(leaves.size, dtype=np.result_type(np.float64, *(part for _, part in found)))
+        for positions, part in found:
+            values[positions] = part
+        return values
 
-    def _value(self, leaf: Leaf) -> float:
-        match leaf.kind:
+    def _values(self, group: Group) -> np.ndarray:
+        asset, starts, ends = group.asset, group.starts, group.ends
+        match group.kind:
             case LeafKind.LOG_SPOT:
-                return math.log(self._spots[leaf.asset])
+                return np.full(len(ends), np.log(self._spots[asset]))
             case LeafKind.FORWARD:
-                return self._spots[leaf.asset] * math.exp(self._growth(leaf.asset, leaf.end))
+                return self._spots[asset] * np.exp(self._growth(asset, ends))
             case LeafKind.VARIANCE:
-                return self._variance(leaf)
+                return self._variance(asset, starts, ends)
             case LeafKind.DRIFT:
-                growth = self._growth(leaf.asset, leaf.end) - self._growth(leaf.asset, leaf.start)
-                return growth - 0.5 * self._variance(leaf)
+                growth = self._growth(asset, ends) - self._growth(asset, starts)
+                return growth - 0.5 * self._variance(asset, starts, ends)
             case LeafKind.DISCOUNT:
-                return self.funded_discount(leaf.end)
+                return self.funded_discount(ends)
             case LeafKind.TERM:
-                return figure(self.contract, leaf)
-        raise ValueError(f"no leaf of the market: {leaf.kind}")
+                return np.array([figure(self.contract, leaf) for leaf in group.leaves])
+        raise ValueError(f"no leaf of the market: {group.kind}")
 
-    def _growth(self, asset: int, time: float) -> float:
+    def _factors(self, factors: Factors) -> np.ndarray:
+        """One factorisation for each step."""
+        lower = lower_factor(self.step_covariance(factors.assets, factors.starts, factors.ends))
+        return lower[factors.steps, factors.rows, factors.columns]
+
+    def _growth(self, asset: int, time: float | np.ndarray) -> np.ndarray:
         """The log of the forward over the spot."""
         given = self._forwards[asset]
         if given is not None:
             return given.log(time)
         return self._yields[asset].log(time) - self._own_rates[asset].log(time)
 
-    def _variance(self, leaf: Leaf) -> float:
-        vol = self._vols[leaf.asset]
-        return covariance_integral(vol, vol, leaf.start, leaf.end)
+    def _variance(self, asset: int, start: np.ndarray, end: np.ndarray) -> np.ndarray:
+        vol = self._vols[asset]
+        return covariance_integral(vol, vol, start, end)
 
-    def _factors(self, leaves: Iterable[Leaf]) -> dict[Leaf, float]:
-        """All FACTOR leaves, one factorisation for each step and the assets that move in it."""
-        steps: dict[tuple[float, float], list[Leaf]] = {}
-        for leaf in leaves:
-            if leaf.kind is LeafKind.FACTOR:
-                steps.setdefault((leaf.start, leaf.end), []).append(leaf)
-        found: dict[Leaf, float] = {}
-        for (start, end), wanted in steps.items():
-            assets = sorted({asset for leaf in wanted for asset in (leaf.asset, leaf.other)})
-            factor = lower_factor(self.step_covariance(assets, start, end))
-            row = {asset: number for number, asset in enumerate(assets)}
-            found.update({leaf: float(factor[row[leaf.asset], row[leaf.other]]) for leaf in wanted})
-        return found
-
-    def step_covariance(self, assets: list[int], start: float, end: float) -> np.ndarray:
-        """The covariance of the assets' logs over a step, shape (assets, assets): correlation times the integral of
-        the product of their vols."""
-        covariance = np.empty((len(assets), len(assets)))
-        for i, first in enumerate(assets):
-            for j, second in enumerate(assets[: i + 1]):
-                integral = covariance_integral(self._vols[first], self._vols[second], start, end)
-                covariance[i, j] = covariance[j, i] = self._correlation[first, second] * integral
+    def step_covariance(self, assets: Sequence[int], start: np.ndarray, end: np.ndarray) -> np.ndarray:
+        """The covariance of the assets' logs over steps, shape (steps, assets, assets): correlation times the integral
+        of the product of their vols."""
+        rows = [[covariance_integral(self._vols[i], self._vols[j], start, end) * self._correlation[i, j]
+                 for j in assets[: number + 1]] for number, i in enumerate(assets)]
+        covariance = np.empty((len(start), len(assets), len(assets)), dtype=np.result_type(*(x for r in rows for x in r)))
+        for i, row in enumerate(rows):
+            for j, values in enumerate(row):
+                covariance[:, i, j] = covariance[:, j, i] = values
         return covariance

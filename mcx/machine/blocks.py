@@ -18,7 +18,7 @@ from mcx.machine.draws import fill_draws
 from mcx.machine.forward import forward
 from mcx.machine.jit import jit
 from mcx.machine.prepare import KernelCode
-from mcx.machine.rows import borrowed, wide_vectors
+from mcx.machine.rows import wide_vectors
 from mcx.machine.sizes import GROUP, lanes_for
 
 _TASKS = 16  # pieces of a batch for each thread: a core that is busy with something else takes fewer
@@ -27,8 +27,8 @@ _CACHE_LINE = 8  # float64
 
 @jit
 def sweep(code, scalars, outputs, normals, uniforms, seed, stream, numbers, paths, registers, words,
-          means, squares, bad, values):  # fmt: skip
-    """Run whole blocks of paths and sum each output over each group of 64.
+          means, squares, bad, sums, values):  # fmt: skip
+    """Run whole blocks of paths and sum each output, and what the code sums, over each group of 64.
 
     numbers    (blocks * lanes,) uint64: path numbers, of which the first `paths` count
     registers  (rows + 1, more than lanes) float64 and words (4, lanes) int32: room to work
@@ -36,15 +36,15 @@ def sweep(code, scalars, outputs, normals, uniforms, seed, stream, numbers, path
     squares    (groups, outputs), written: the sum of squares about that mean
     bad        (groups,) int64, written: path * outputs + output of the first value that is not finite, with
                the path counted from the group's first; -1 if there is none
+    sums       (groups up to the end of a block, sums), written: what the code sums
     values     (paths, outputs), written; or (0, outputs)
     """
     lanes, width = words.shape[1], outputs.shape[0]
-    registers = borrowed(registers)
     tree = registers[registers.shape[0] - 1]
     for first in range(0, paths, lanes):
         fill_draws(registers, words, numbers[first : first + lanes], normals, uniforms, seed, stream)
-        forward(registers, code, scalars, lanes)
         here = min(lanes, paths - first)
+        forward(registers, code, scalars, lanes, here, sums[first // GROUP : (first + lanes) // GROUP])
         for start in range(0, here, GROUP):
             group, count = (first + start) // GROUP, min(GROUP, here - start)
             finite = True
@@ -118,8 +118,8 @@ class Crew:
 
     def run(
         self, numbers: range | np.ndarray, values: np.ndarray | None = None
-    ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-        """Means, squares and first bad value of each group of the given path numbers, as `sweep` writes them.
+    ) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+        """Means, squares, first bad value and sums of each group of the given path numbers, as `sweep` writes them.
 
         numbers a range, or (paths,) uint64; values (paths, outputs) float64 is filled if given.
         """
@@ -127,6 +127,7 @@ class Crew:
         groups, blocks = -(-paths // GROUP), -(-paths // self.lanes)
         means, squares = np.empty((groups, outputs)), np.empty((groups, outputs))
         bad = np.empty(groups, dtype=np.int64)
+        sums = np.empty((blocks * self.lanes // GROUP, self.code.sums))
         pieces = min(blocks, self.threads * _TASKS) if self._pool else 1
         bounds = [blocks * piece // pieces * self.lanes for piece in range(pieces + 1)]
 
@@ -138,12 +139,12 @@ class Crew:
             room = self._rooms.pop()
             sweep(self.code.code, self.code.scalars, self.code.outputs, *self._draws,
                   _numbered(numbers, first, end), last - first, *room,
-                  means[these], squares[these], bad[these], written)  # fmt: skip
+                  means[these], squares[these], bad[these], sums[first // GROUP :], written)  # fmt: skip
             self._rooms.append(room)
 
         for _ in self._pool.map(work, range(pieces)) if self._pool else map(work, range(pieces)):
             pass
-        return means, squares, bad
+        return means, squares, bad, sums[:groups]
 
     def _room(self) -> tuple[np.ndarray, np.ndarray]:
         """Registers and random words of one thread. Rows begin on cache lines, and are one line longer than

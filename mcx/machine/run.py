@@ -4,13 +4,13 @@ from __future__ import annotations
 
 import os
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from enum import IntEnum
 
 import numpy as np
 
 from mcx.machine.prepare import KernelCode, prepare
-from mcx.machine.sizes import GROUP, batch_for
+from mcx.machine.sizes import BATCHES, GROUP, batch_for
 from mcx.tape.program import Program
 
 COMPILING = "compiling the kernels once for this machine, which takes about half a minute"
@@ -46,10 +46,16 @@ class Snapshot:
 
 @dataclass(frozen=True, slots=True)
 class BlockSums(Snapshot):
-    """The result of a run; `snapshots` are what it had reached on the way; `interrupted`: paths are missing."""
+    """The result of a run; `snapshots` are what it had reached on the way; `interrupted`: paths are missing.
+
+    batch_paths (64,) and sums (64, sums): the sums that the program asks for, over each of 64 fixed parts of the run,
+    and how many paths each part has (none, where the run has fewer than 64 groups of paths).
+    """
 
     snapshots: tuple[Snapshot, ...] = ()
     interrupted: bool = False
+    batch_paths: np.ndarray = field(default_factory=lambda: np.zeros(BATCHES, dtype=np.int64))
+    sums: np.ndarray = field(default_factory=lambda: np.zeros((BATCHES, 0)))
 
 
 class NonFinitePath(ArithmeticError):
@@ -61,6 +67,18 @@ class NonFinitePath(ArithmeticError):
     def __init__(self, path: int, output: int, seed: int, stream: int):
         self.path, self.output, self.seed, self.stream = path, output, seed, stream
         super().__init__(f"output {output} is not finite on path {path} (seed {seed}, stream {stream})")
+
+
+class NonFiniteSum(ArithmeticError):
+    """A sum over paths that is infinite or not a number while every output is finite.
+
+    sum, first_path, seed, stream: int, the first such sum, the first of the 64 paths, and the run they belong to.
+    """
+
+    def __init__(self, number: int, first_path: int, seed: int, stream: int):
+        self.sum, self.first_path, self.seed, self.stream = number, first_path, seed, stream
+        last = first_path + GROUP - 1
+        super().__init__(f"sum {number} is not finite over paths {first_path} to {last} (seed {seed}, stream {stream})")
 
 
 Progress = Callable[[int, float, float], None]
@@ -89,25 +107,29 @@ def run(
     notice      called with a sentence if the kernels have to be compiled first
 
     Raises NonFinitePath for the first path with an output that is not finite, and KeyboardInterrupt if that
-    comes before the first batch is done; later the sums so far are returned, marked as interrupted.
+    comes before the first batch is done, and NonFiniteSum; later the sums so far are returned, marked as interrupted.
     """
     if paths < 1:
         raise ValueError(f"a run needs at least one path, not {paths}")
     code = prepare(program)
     reached: BlockSums | None = None  # replaced as a whole: an interruption cannot find it half made
     with _crew(code, seed, stream, threads, lanes, notice) as crew:
-        from mcx.machine.sums import Totals
+        from mcx.machine.sums import Batches, Totals
 
+        parts = Batches(code.sums, first_path // GROUP)
         totals = Totals(len(code.outputs), paths, snapshots)
         batch = batch_for(code, crew.lanes)
         try:
             for first in range(0, paths, batch):
                 count = min(batch, paths - first)
-                means, squares, bad = crew.run(range(first_path + first, first_path + first + count))
+                means, squares, bad, sums = crew.run(range(first_path + first, first_path + first + count))
                 _refuse_bad(bad, first_path + first, code, seed, stream)
+                _refuse_bad_sum(sums, first_path + first, seed, stream)
                 totals.add(count, means, squares)
-                noted = tuple(Snapshot(*sums) for sums in totals.noted)
-                reached = BlockSums(totals.paths, totals.mean, totals.squares, noted)
+                parts.add(count, sums)
+                noted = tuple(Snapshot(*reached_then) for reached_then in totals.noted)
+                reached = BlockSums(totals.paths, totals.mean, totals.squares, noted, batch_paths=parts.paths.copy(),
+                                    sums=parts.sums)
                 if progress:
                     progress(reached.paths, float(reached.mean[0]), float(reached.standard_error[0]))
         except KeyboardInterrupt:
@@ -179,3 +201,9 @@ def _refuse_bad(bad: np.ndarray, first: int, code: KernelCode, seed: int, stream
     if len(found):
         path, output = divmod(int(bad[found[0]]), len(code.outputs))
         raise NonFinitePath(first + GROUP * int(found[0]) + path, output, seed, stream)
+
+
+def _refuse_bad_sum(sums: np.ndarray, first: int, seed: int, stream: int) -> None:
+    if not np.isfinite(sums).all():
+        group, number = np.argwhere(~np.isfinite(sums))[0].tolist()
+        raise NonFiniteSum(number, first + GROUP * group, seed, stream)
