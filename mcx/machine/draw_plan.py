@@ -19,25 +19,28 @@ import numpy as np
 
 SCRAMBLE_BITS = 32  # of a path's number, above those of the point
 MOST_POINTS = 1 << 32  # in a scramble: the points have 32 binary digits
+LEADING = 4  # columns of the rank by which a path order differs from a bridge
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class PathOrder:
     """Which coordinate of a point each normal begins as, and how an asset's normals are then mixed over its steps.
 
-    The mixing is an orthogonal map: the normals stay independent and standard, whatever the order.
+    The mixing is an orthogonal map: the normals stay independent and standard, whatever the order. It takes the
+    normals z of each asset a, numbers a, a + assets, ..., to z - left (right' z), and then turns pairs of them.
 
-    coordinates  (normals,) int32: a permutation; normal k of the tape begins as this coordinate
+    coordinates  (normals,) int32: a permutation; normal k of the tape begins as this coordinate of a net's point
+                 (pseudo-random numbers are all alike and stay as they are)
+    left, right  (assets, steps, LEADING) float64; or (0, 0, LEADING): this step is left out
     pairs        (rotations, 2) int32: normals (i, j) that become (c zi + s zj, s zi - c zj), one after the other
     turns        (rotations, 2) float64: c and s
-    matrices     (assets, steps, steps) float64 or empty: the normals of asset a, numbers a, a + assets, ..., become
-                 the matrix times themselves; after the rotations
     """
 
     coordinates: np.ndarray
+    left: np.ndarray
+    right: np.ndarray
     pairs: np.ndarray
     turns: np.ndarray
-    matrices: np.ndarray
 
 
 @dataclass(frozen=True, slots=True, eq=False)
