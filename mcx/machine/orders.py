@@ -22,7 +22,7 @@ import numpy as np
 
 from mcx.machine.draw_plan import LEADING, PathOrder
 
-COMPONENT_STEPS = 512  # beyond, the eigenvectors take longer than they save
+COMPONENT_STEPS = 256  # beyond, the eigenvectors take longer to find than many a run
 
 
 def bridge(clock: np.ndarray) -> PathOrder:
@@ -84,11 +84,12 @@ def _halve(variances: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
 
 
 def _leading(variances: np.ndarray) -> np.ndarray:
-    """The normals of the leading principal components of the path, shape (steps, at most LEADING)."""
+    """The normals of the leading principal components of the path, shape (steps, at most LEADING); to 10 digits, so
+    that nothing hangs on the order in which a library adds: whatever they are, the map is made orthogonal."""
     times = np.cumsum(variances)
     values, vectors = np.linalg.eigh(np.minimum.outer(times, times))
     values, vectors = values[::-1][:LEADING], vectors[:, ::-1][:, :LEADING]
-    return np.diff(vectors, axis=0, prepend=0.0) * np.sqrt(values) / np.sqrt(variances)[:, None]
+    return np.round(np.diff(vectors, axis=0, prepend=0.0) * np.sqrt(values) / np.sqrt(variances)[:, None], 10)
 
 
 def _turned_back(normals: np.ndarray, pairs: np.ndarray, turns: np.ndarray) -> np.ndarray:

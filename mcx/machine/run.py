@@ -9,6 +9,7 @@ from enum import IntEnum
 
 import numpy as np
 
+from mcx.machine.draw_plan import PLAIN, DrawPlan
 from mcx.machine.prepare import KernelCode, prepare
 from mcx.machine.sizes import GROUP, batch_for
 from mcx.tape.program import Program
@@ -73,6 +74,7 @@ def run(
     seed: int,
     paths: int,
     stream: int = Stream.MAIN,
+    plan: DrawPlan = PLAIN,
     first_path: int = 0,
     threads: int | None = None,
     lanes: int | None = None,
@@ -82,7 +84,7 @@ def run(
 ) -> BlockSums:
     """Mean and spread of every output over paths first_path .. first_path + paths - 1.
 
-    seed        0 .. 2^64 - 1; with it, the stream and the path numbers every digit is fixed
+    seed        0 .. 2^64 - 1; with it, the stream, the plan of draws and the path numbers every digit is fixed
     threads     None: all that the process may use; no digit depends on it, nor on `lanes`, a multiple of 64
     progress    called after each batch with the paths done and the mean and standard error of output 0
     snapshots   numbers of paths at which to note the sums; each is rounded up to a whole group of 64
@@ -95,7 +97,7 @@ def run(
         raise ValueError(f"a run needs at least one path, not {paths}")
     code = prepare(program)
     reached: BlockSums | None = None  # replaced as a whole: an interruption cannot find it half made
-    with _crew(code, seed, stream, threads, lanes, notice) as crew:
+    with _crew(code, seed, stream, threads, lanes, notice, plan) as crew:
         from mcx.machine.sums import Totals
 
         totals = Totals(len(code.outputs), paths, snapshots)
@@ -124,6 +126,7 @@ def levels(
     seed: int,
     numbers: Sequence[int] | np.ndarray,
     stream: int = Stream.MAIN,
+    plan: DrawPlan = PLAIN,
     threads: int | None = None,
     lanes: int | None = None,
 ) -> np.ndarray:
@@ -131,7 +134,7 @@ def levels(
     code = prepare(program)
     numbers = np.array(numbers, dtype=np.uint64)
     values = np.empty((len(numbers), len(code.outputs)))
-    with _crew(code, seed, stream, threads, lanes) as crew:
+    with _crew(code, seed, stream, threads, lanes, plan=plan) as crew:
         crew.run(numbers, values)
     return values
 
@@ -144,8 +147,9 @@ def values_by_path(
 
 
 def draws(
-    program: Program, *, seed: int, numbers: Sequence[int] | np.ndarray, stream: int = Stream.MAIN
-) -> np.ndarray:
+    program: Program, *, seed: int, numbers: Sequence[int] | np.ndarray, stream: int = Stream.MAIN,
+    plan: DrawPlan = PLAIN,
+) -> np.ndarray:  # fmt: skip
     """What the paths draw, normals first, then uniforms; shape (paths, draws)."""
     nothing = Program(
         code=np.empty((0, 6), dtype=np.int32),
@@ -155,7 +159,7 @@ def draws(
         uniforms=program.uniforms,
         rows=program.draws,
     )
-    return levels(nothing, seed=seed, stream=stream, numbers=numbers)
+    return levels(nothing, seed=seed, stream=stream, numbers=numbers, plan=plan)
 
 
 def available_threads() -> int:
@@ -164,7 +168,7 @@ def available_threads() -> int:
 
 
 def _crew(code: KernelCode, seed: int, stream: int, threads: int | None, lanes: int | None,
-          notice: Notice | None = None):
+          notice: Notice | None = None, plan: DrawPlan = PLAIN):
     """The crew of a run; numba is imported only now, and compiles only now."""
     from mcx.machine.jit import is_cold
 
@@ -172,7 +176,7 @@ def _crew(code: KernelCode, seed: int, stream: int, threads: int | None, lanes: 
         notice(COMPILING)
     from mcx.machine.blocks import Crew
 
-    return Crew(code, seed, stream, threads or available_threads(), lanes)
+    return Crew(code, seed, stream, threads or available_threads(), lanes, plan)
 
 
 def _refuse_bad(bad: np.ndarray, first: int, code: KernelCode, seed: int, stream: int) -> None:
