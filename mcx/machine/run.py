@@ -9,7 +9,7 @@ from enum import IntEnum
 
 import numpy as np
 
-from mcx.machine.draw_plan import PLAIN, DrawPlan
+from mcx.machine.draw_plan import PLAIN, DrawPlan, point_numbers
 from mcx.machine.prepare import KernelCode, prepare
 from mcx.machine.sizes import GROUP, batch_for
 from mcx.tape.program import Program
@@ -50,6 +50,18 @@ class BlockSums(Snapshot):
     """The result of a run; `snapshots` are what it had reached on the way; `interrupted`: paths are missing."""
 
     snapshots: tuple[Snapshot, ...] = ()
+    interrupted: bool = False
+
+
+@dataclass(frozen=True, slots=True)
+class ScrambleSums:
+    """The result of a run over scrambled points: means (scrambles, outputs), each over `points` points.
+
+    `interrupted`: scrambles are missing; those here are whole.
+    """
+
+    points: int
+    means: np.ndarray
     interrupted: bool = False
 
 
@@ -107,7 +119,7 @@ def run(
                 count = min(batch, paths - first)
                 numbers = np.arange(first_path + first, first_path + first + count, dtype=np.uint64)
                 means, squares, bad = crew.run(numbers)
-                _refuse_bad(bad, first_path + first, code, seed, stream)
+                _refuse_bad(bad, numbers, code, seed, stream)
                 totals.add(count, means, squares)
                 noted = tuple(Snapshot(*sums) for sums in totals.noted)
                 reached = BlockSums(totals.paths, totals.mean, totals.squares, noted)
@@ -118,6 +130,66 @@ def run(
                 raise
             return replace(reached, interrupted=reached.paths < paths)
     return reached
+
+
+def run_scrambles(
+    program: Program,
+    *,
+    seed: int,
+    plan: DrawPlan,
+    points: int,
+    stream: int = Stream.MAIN,
+    threads: int | None = None,
+    lanes: int | None = None,
+    progress: Progress | None = None,
+    notice: Notice | None = None,
+) -> ScrambleSums:
+    """The mean of every output over the first `points` points, whole groups of 64, of each scramble of the plan.
+
+    `progress` is called with the paths done, and the mean and standard error of output 0 over the scrambles that are
+    whole, once there are two. The rest is as in `run`; after an interruption there is a result from two scrambles on.
+    """
+    if points < 1 or points % GROUP:
+        raise ValueError(f"a scramble has whole groups of {GROUP} points, not {points}")
+    code = prepare(program)
+    paths = plan.scrambles * points
+    whole: list[np.ndarray] = []  # the means of each whole scramble
+    with _crew(code, seed, stream, threads, lanes, notice, plan) as crew:
+        from mcx.machine.sums import Totals
+
+        batch = batch_for(code, crew.lanes)
+        totals = Totals(len(code.outputs), points, ())
+        try:
+            for first in range(0, paths, batch):
+                numbers = _numbers(first, min(first + batch, paths), points)
+                means, squares, bad = crew.run(numbers)
+                _refuse_bad(bad, numbers, code, seed, stream)
+                done = 0
+                while done < len(numbers):
+                    count = min(points - totals.paths, len(numbers) - done)
+                    groups = slice(done // GROUP, (done + count) // GROUP)
+                    totals.add(count, means[groups], squares[groups])
+                    done += count
+                    if totals.paths == points:
+                        whole.append(totals.mean)
+                        totals = Totals(len(code.outputs), points, ())
+                if progress and len(whole) > 1:
+                    prices = np.array([mean[0] for mean in whole])
+                    error = prices.std(ddof=1) / np.sqrt(len(whole))
+                    progress(first + len(numbers), float(prices.mean()), float(error))
+        except KeyboardInterrupt:
+            if len(whole) < 2:
+                raise
+    return ScrambleSums(points, np.array(whole), interrupted=len(whole) < plan.scrambles)
+
+
+def _numbers(first: int, last: int, points: int) -> np.ndarray:
+    """The path numbers of a part of a run over scrambles of so many points."""
+    scrambles = range(first // points, -(-last // points))
+    return np.concatenate([
+        point_numbers(scramble, min(last - scramble * points, points) - start, start)
+        for scramble in scrambles for start in [max(first - scramble * points, 0)]
+    ])  # fmt: skip
 
 
 def levels(
@@ -179,8 +251,8 @@ def _crew(code: KernelCode, seed: int, stream: int, threads: int | None, lanes: 
     return Crew(code, seed, stream, threads or available_threads(), lanes, plan)
 
 
-def _refuse_bad(bad: np.ndarray, first: int, code: KernelCode, seed: int, stream: int) -> None:
+def _refuse_bad(bad: np.ndarray, numbers: np.ndarray, code: KernelCode, seed: int, stream: int) -> None:
     found = np.flatnonzero(bad >= 0)
     if len(found):
         path, output = divmod(int(bad[found[0]]), len(code.outputs))
-        raise NonFinitePath(first + GROUP * int(found[0]) + path, output, seed, stream)
+        raise NonFinitePath(int(numbers[GROUP * int(found[0]) + path]), output, seed, stream)
