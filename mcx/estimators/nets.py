@@ -8,6 +8,7 @@ and each pair of them, spread as evenly as the points are meant to be (A. Owen, 
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 from dataclasses import dataclass
 from enum import Enum
@@ -25,6 +26,7 @@ from mcx.tape.steps import Grid
 
 SCRAMBLES = 16  # more would leave each of them too few points, fewer would widen the t quantile
 FEWEST_POINTS = 64
+SAME = 1e6  # means closer than this part of one path's share are one mean
 
 
 class Order(Enum):
@@ -96,9 +98,30 @@ def net_estimates(sums: ScrambleSums, scrambles: int | None = None) -> tuple[Est
     """The estimate of each output from the scrambles of a run, or the first of them; at least two."""
     from scipy.special import stdtrit
 
-    means = sums.means[:scrambles]
-    count = len(means)
-    errors = means.std(axis=0, ddof=1) / np.sqrt(count)
+    means, squares = sums.means[:scrambles], sums.squares[:scrambles]
+    count, outputs = means.shape
     quantile = float(stdtrit(count - 1, 0.975))
-    return tuple(Estimate(float(mean), float(error), count * sums.points, quantile)
-                 for mean, error in zip(means.mean(axis=0), errors, strict=True))
+    spread = np.sqrt(squares.mean(axis=0) / sums.points)
+    return tuple(
+        Estimate(float(means[:, k].mean()), _deviation(means[:, k], spread[k] / sums.points) / math.sqrt(count),
+                 count * sums.points, quantile)
+        for k in range(outputs)
+    )  # fmt: skip
+
+
+def _deviation(means: np.ndarray, part: float) -> float:
+    """The standard deviation of a scramble's mean, from those of all; `part`: that of one path, over the points.
+
+    Points so even that nearly every scramble has as many on each side of a jump give means that are equal, but for a
+    few: their spread alone would promise an exact result where none of 16 happened to differ. Then it is that of a
+    proportion with two more of either kind (A. Agresti, B. Coull, "Approximate is better than 'exact' for interval
+    estimation of binomial proportions", The American Statistician 52 (1998), 119-126), times the jump.
+    """
+    found = float(means.std(ddof=1))
+    counts = np.unique(np.round(means / part * SAME) if part > 0.0 else means, return_counts=True)[1]
+    odd = len(means) - int(counts.max())
+    if part == 0.0 or 2 * odd > len(means):
+        return found
+    jump = max(2.0 * part, float(np.ptp(means)))
+    share = (odd + 2) / (len(means) + 4)
+    return max(found, jump * math.sqrt(share * (1.0 - share)))

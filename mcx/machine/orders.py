@@ -22,7 +22,7 @@ import numpy as np
 
 from mcx.machine.draw_plan import LEADING, PathOrder
 
-COMPONENT_STEPS = 256  # beyond, the eigenvectors take longer to find than many a run
+COMPONENT_STEPS = 512  # beyond, the eigenvectors take longer to find than many a run
 
 
 def bridge(clock: np.ndarray) -> PathOrder:

@@ -55,13 +55,15 @@ class BlockSums(Snapshot):
 
 @dataclass(frozen=True, slots=True)
 class ScrambleSums:
-    """The result of a run over scrambled points: means (scrambles, outputs), each over `points` points.
+    """The result of a run over scrambled points: means, and squares about them, (scrambles, outputs), each over
+    `points` points.
 
     `interrupted`: scrambles are missing; those here are whole.
     """
 
     points: int
     means: np.ndarray
+    squares: np.ndarray
     interrupted: bool = False
 
 
@@ -153,7 +155,7 @@ def run_scrambles(
         raise ValueError(f"a scramble has whole groups of {GROUP} points, not {points}")
     code = prepare(program)
     paths = plan.scrambles * points
-    whole: list[np.ndarray] = []  # the means of each whole scramble
+    whole: list[tuple[np.ndarray, np.ndarray]] = []  # means and squares of each whole scramble
     with _crew(code, seed, stream, threads, lanes, notice, plan) as crew:
         from mcx.machine.sums import Totals
 
@@ -171,16 +173,17 @@ def run_scrambles(
                     totals.add(count, means[groups], squares[groups])
                     done += count
                     if totals.paths == points:
-                        whole.append(totals.mean)
+                        whole.append((totals.mean, totals.squares))
                         totals = Totals(len(code.outputs), points, ())
                 if progress and len(whole) > 1:
-                    prices = np.array([mean[0] for mean in whole])
+                    prices = np.array([mean[0] for mean, _ in whole])
                     error = prices.std(ddof=1) / np.sqrt(len(whole))
                     progress(first + len(numbers), float(prices.mean()), float(error))
         except KeyboardInterrupt:
             if len(whole) < 2:
                 raise
-    return ScrambleSums(points, np.array(whole), interrupted=len(whole) < plan.scrambles)
+    means, squares = map(np.array, zip(*whole, strict=True))
+    return ScrambleSums(points, means, squares, interrupted=len(whole) < plan.scrambles)
 
 
 def _numbers(first: int, last: int, points: int) -> np.ndarray:
