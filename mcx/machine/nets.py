@@ -52,19 +52,20 @@ def fill_net(words, numbers, runs, directions, low, keys):
     for group in range(runs.shape[0]):
         start = group * GROUP
         if runs[group]:
-            base, key = _unscrambled(numbers[start], directions), keys[np.int64(numbers[start] >> _SCRAMBLE)]
+            base, key = unscrambled(numbers[start], directions), keys[np.int64(numbers[start] >> _SCRAMBLE)]
             add, times = key[0], key[1]
             for i in range(GROUP):
-                words[start + i] = _scrambled(base ^ low[i], add, times)
+                words[start + i] = scrambled(base ^ low[i], add, times)
         else:
             for i in range(start, start + GROUP):
                 key = keys[np.int64(numbers[i] >> _SCRAMBLE)]
-                words[i] = _scrambled(_unscrambled(numbers[i], directions), key[0], key[1])
+                words[i] = scrambled(unscrambled(numbers[i], directions), key[0], key[1])
 
 
 @jit
-def _unscrambled(number, directions):
-    """One coordinate of the point of this number, in the order of plain binary numbers, digits in reverse."""
+def unscrambled(number, directions):
+    """One coordinate of the point of this number, digits in reverse. Numbers are plain, not Gray codes: the points are
+    those of the sequence, in another order within each power of two."""
     x = np.uint32(0)
     bits = number & _POINT
     while bits:
@@ -74,7 +75,8 @@ def _unscrambled(number, directions):
 
 
 @jit
-def _scrambled(x, add, times):
+def scrambled(x, add, times):
+    """A coordinate scrambled, as a word less 2^31; x, add and times (odd): uint32, x with its digits in reverse."""
     x = np.uint32(x ^ np.uint32(x * _MIX_BEFORE))
     x = np.uint32(np.uint32(x + add) * times)
     x = np.uint32(x ^ np.uint32(x * _MIX_AFTER))
