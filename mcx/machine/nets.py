@@ -5,9 +5,9 @@ depends on no higher one is a nested scrambling (A. Owen, 1995), and arithmetic 
 m uniform among the odd numbers takes any pair of points whose first k digits agree and whose next differ to a
 pair whose first is uniform and whose difference is 2^k times a uniform odd number, independent of it. That is the law
 of a pair under Owen's scrambling, and pairs are all that bias and variance depend on, so both are exact here with two
-random words for each coordinate. Bit mixers of the same nested kind before and after leave that law as it is and
-keep whole nets from moving in step (S. Laine, T. Karras, "Stratified sampling for stochastic transparency", 2011;
-constants from N. Vegdahl's search, 2021).
+random words for each coordinate. A mixer of the same nested kind leaves that law as it is and breaks up arithmetic
+progressions of three and more points (S. Laine, T. Karras, "Stratified sampling for stochastic transparency", 2011;
+the constant is from N. Vegdahl's search, 2021).
 """
 
 from __future__ import annotations
@@ -19,7 +19,7 @@ from mcx.machine.draw_plan import SCRAMBLE_BITS
 from mcx.machine.jit import jit
 from mcx.machine.sizes import GROUP
 
-_MIX_BEFORE, _MIX_AFTER, _MIX_LAST = np.uint32(0x3D20ADEA), np.uint32(0x05526C56), np.uint32(0x53A22864)
+_MIX = np.uint32(0x53A22864)
 _SIGN = np.uint32(0x80000000)
 _SCRAMBLE = np.uint64(SCRAMBLE_BITS)
 _POINT = np.uint64((1 << SCRAMBLE_BITS) - 1)
@@ -49,10 +49,14 @@ def fill_net(words, numbers, runs, directions, low, keys):
     low         (64,) uint32: what the lowest six bits together contribute
     keys        (scrambles, 2) uint32: what is added, and the odd number that multiplies
     """
+    last, base = np.uint64(0), np.uint32(0)
     for group in range(runs.shape[0]):
         start = group * GROUP
         if runs[group]:
-            base, key = unscrambled(numbers[start], directions), keys[np.int64(numbers[start] >> _SCRAMBLE)]
+            first = numbers[start]
+            base = np.uint32(base ^ unscrambled(first ^ last, directions))  # few bits of a number change
+            last = first
+            key = keys[np.int64(first >> _SCRAMBLE)]
             add, times = key[0], key[1]
             for i in range(GROUP):
                 words[start + i] = scrambled(base ^ low[i], add, times)
@@ -77,8 +81,6 @@ def unscrambled(number, directions):
 @jit
 def scrambled(x, add, times):
     """A coordinate scrambled, as a word less 2^31; x, add and times (odd): uint32, x with its digits in reverse."""
-    x = np.uint32(x ^ np.uint32(x * _MIX_BEFORE))
     x = np.uint32(np.uint32(x + add) * times)
-    x = np.uint32(x ^ np.uint32(x * _MIX_AFTER))
-    x = np.uint32(x ^ np.uint32(x * _MIX_LAST))
+    x = np.uint32(x ^ np.uint32(x * _MIX))
     return np.int32(reversed_bits(x) ^ _SIGN)

@@ -24,7 +24,7 @@ from mcx.leaves.market_map import MarketMap
 from mcx.machine.run import ScrambleSums
 from mcx.tape.program import Program
 
-SEED = 0x3C6EF372FE94F82B
+SEED = 0x510E527FADE682D1
 EXAMPLES = sorted((Path(__file__).resolve().parents[2] / "payoffs" / "examples").glob("*.yaml"))
 
 
