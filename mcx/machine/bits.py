@@ -103,6 +103,16 @@ if COMPILED:
 
         return types.int64(types.uint64), code
 
+    @intrinsic
+    def reversed_bits(typing_context, word):
+        """A uint32 with its first bit last."""
+
+        def code(context, builder, signature, arguments):
+            turn = builder.module.declare_intrinsic("llvm.bitreverse", [ir.IntType(32)])
+            return builder.call(turn, arguments)
+
+        return types.uint32(types.uint32), code
+
 else:
 
     def float_to_bits(x):
@@ -126,3 +136,6 @@ else:
 
     def lowest_bit(mask):
         return (int(mask) & -int(mask)).bit_length() - 1
+
+    def reversed_bits(word):
+        return np.uint32(int(f"{int(word):032b}"[::-1], 2))

@@ -14,7 +14,8 @@ from concurrent.futures import ThreadPoolExecutor
 
 import numpy as np
 
-from mcx.machine.draws import fill_draws
+from mcx.machine.draw_plan import LEADING, PLAIN, DrawPlan
+from mcx.machine.draws import drawing_of, fill_draws
 from mcx.machine.forward import forward
 from mcx.machine.jit import jit
 from mcx.machine.prepare import KernelCode
@@ -26,12 +27,14 @@ _CACHE_LINE = 8  # float64
 
 
 @jit
-def sweep(code, scalars, outputs, normals, uniforms, seed, stream, numbers, paths, registers, words,
+def sweep(code, scalars, outputs, drawing, numbers, paths, registers, words, runs, room,
           means, squares, bad, sums, values):  # fmt: skip
     """Run whole blocks of paths and sum each output, and what the code sums, over each group of 64.
 
     numbers    (blocks * lanes,) uint64: path numbers, of which the first `paths` count
-    registers  (rows + 1, more than lanes) float64 and words (4, lanes) int32: room to work
+    drawing    see `Drawing`
+    registers  (rows + 1, more than lanes) float64, words (4, lanes) int32, runs (lanes / 64,) int64 and
+               room (LEADING, 64) float64: to work in
     means      (groups, outputs), written: the mean over each group
     squares    (groups, outputs), written: the sum of squares about that mean
     bad        (groups,) int64, written: path * outputs + output of the first value that is not finite, with
@@ -42,7 +45,7 @@ def sweep(code, scalars, outputs, normals, uniforms, seed, stream, numbers, path
     lanes, width = words.shape[1], outputs.shape[0]
     tree = registers[registers.shape[0] - 1]
     for first in range(0, paths, lanes):
-        fill_draws(registers, words, numbers[first : first + lanes], normals, uniforms, seed, stream)
+        fill_draws(registers, words, runs, room, numbers[first : first + lanes], drawing)
         here = min(lanes, paths - first)
         forward(registers, code, scalars, lanes, here, sums[first // GROUP : (first + lanes) // GROUP])
         for start in range(0, here, GROUP):
@@ -101,11 +104,12 @@ def _numbered(numbers: range | np.ndarray, first: int, end: int) -> np.ndarray:
 class Crew:
     """Threads, each with room to work, that run one kernel code; a context manager, for one caller."""
 
-    def __init__(self, code: KernelCode, seed: int, stream: int, threads: int, lanes: int | None = None):
+    def __init__(self, code: KernelCode, seed: int, stream: int, threads: int, lanes: int | None = None,
+                 plan: DrawPlan = PLAIN):
         self.code = code
         self.lanes = lanes or lanes_for(code.rows)
         self.threads = threads
-        self._draws = code.normals, code.uniforms, np.uint64(seed), np.uint64(stream)
+        self._drawing = drawing_of(plan, code.normals, code.uniforms, seed, stream)
         self._rooms = deque(self._room() for _ in range(threads))
         self._pool = ThreadPoolExecutor(threads) if threads > 1 else None
 
@@ -137,7 +141,7 @@ class Crew:
             these = slice(first // GROUP, -(-last // GROUP))
             written = np.empty((0, outputs)) if values is None else values[first:last]
             room = self._rooms.pop()
-            sweep(self.code.code, self.code.scalars, self.code.outputs, *self._draws,
+            sweep(self.code.code, self.code.scalars, self.code.outputs, self._drawing,
                   _numbered(numbers, first, end), last - first, *room,
                   means[these], squares[these], bad[these], sums[first // GROUP :], written)  # fmt: skip
             self._rooms.append(room)
@@ -146,12 +150,15 @@ class Crew:
             pass
         return means, squares, bad, sums[:groups]
 
-    def _room(self) -> tuple[np.ndarray, np.ndarray]:
-        """Registers and random words of one thread. Rows begin on cache lines, and are one line longer than
-        the lanes: with 512 lanes the same lane of all rows would else compete for the same few places of the
-        cache."""
+    def _room(self) -> tuple[np.ndarray, ...]:
+        """Registers, random words and what else one thread works in.
+
+        Rows begin on cache lines, and are one line longer than the lanes: with 512 lanes the same lane of all rows
+        would else compete for the same few places of the cache.
+        """
         stride = self.lanes + _CACHE_LINE
         raw = np.empty((self.code.rows + 1) * stride + _CACHE_LINE)
         start = -raw.ctypes.data // 8 % _CACHE_LINE
         registers = raw[start : start + (self.code.rows + 1) * stride].reshape(-1, stride)
-        return registers, np.empty((4, self.lanes), dtype=np.int32)
+        words, runs = np.empty((4, self.lanes), dtype=np.int32), np.empty(self.lanes // GROUP, dtype=np.int64)
+        return registers, words, runs, np.empty((LEADING, GROUP))
