@@ -21,7 +21,7 @@ from mcx.text.documents import parse_documents
 from mcx.text.located import Document
 
 FORMAT = 1
-PACKAGES = ("mcx", "numpy", "numba", "llvmlite", "scipy", "pyyaml", "holidays")
+PACKAGES = ("mcx", "numpy", "numba", "llvmlite", "scipy", "pyyaml", "holidays", "python-dateutil")
 CHECKSUM = "sha256"
 REQUEST = {  # what a result repeats of its request, by verb
     "price": ("contract", "paths", "seed", "reduction"),
