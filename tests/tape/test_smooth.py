@@ -195,7 +195,7 @@ def price_jumps_of(ready: Ready, leaves: np.ndarray) -> tuple[tuple[Jump, ...], 
     return jumps(tape, leaves, [output.value for output in tape.outputs if output.kind == "price"])
 
 
-def largest_jump(tape: Tape, leaves: np.ndarray, value: int, seed: int, walks: int = 8) -> float:
+def largest_jump(tape: Tape, leaves: np.ndarray, value: int, seed: int, walks: int = 24) -> float:
     """The largest jump of a value along straight walks through the draws, relative to its size on the walk.
 
     Of a step of the walk the half with the larger change is halved again, until nothing but a jump is left.
