@@ -87,7 +87,8 @@ def methods(ready: Ready, market: Market, asked: str) -> Methods:
     valid = []
     if asked != "likelihood" and not jumping:
         valid.append(method(PATHWISE, smooth, []))
-    if asked in ("auto", "mixed") and jumping and smooth and not still:
+    drawn = [payment for payment in smooth if known[payment] is None]
+    if asked in ("auto", "mixed") and jumping and drawn and not still:
         valid.append(method(MIXED, smooth, jumping))
     few = tape.normals + tape.uniforms <= MOST_DRAWS
     wanted = {"pathwise": False, "likelihood": True, "mixed": not valid, "auto": bool(jumping) or few}[asked]
