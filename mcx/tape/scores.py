@@ -43,7 +43,8 @@ class Scores:
     """Scores on each path.
 
     first    by leaf (the value of the tape that it is): the first derivative of the density, over the density
-    second   by pair of starting logs, the smaller number first: the second derivative, over the density; if asked for
+    second   by pair of starting logs, the smaller number first: the second derivative, over the density; if asked for,
+             and not for a log with an extreme that is not held
     held     what does not move in the part that is added: logs and extremes
     refused  starting logs without a score, with the place of what stands against it
     """
@@ -114,6 +115,7 @@ class _Scoring:
         self.builder, self.values = builder, values
         self.steps: tuple[Instruction, ...] = tuple(builder.instructions)
         self.needed = self._needed()
+        self.opened: set[int] = set()  # starting logs with an extreme that is not held
         self.by_span: dict[Span, _Step] = {}
         self.spots: dict[int, int] = {}  # by asset
         self.uniform: list[bool] = []
@@ -204,6 +206,7 @@ class _Scoring:
         uses = self._uses(number) if self.uniform[x0] else None
         if uses and uses.as_number and not uses.compared and not uses.barriers:
             held.discard(number)
+            self.opened.add(x0)
             return
         by_variance = emit(Op.SUB, constant(-1.0), emit(Op.LOG, u))
         first[variance] = self._sum(emit(Op.DIV, by_variance, variance), first.get(variance))
@@ -306,7 +309,7 @@ class _Scoring:
         for i, one in enumerate(assets):
             for j, other in enumerate(assets[: i + 1]):
                 pair = self.spots.get(one, -1), self.spots.get(other, -1)
-                if not all(spot in first for spot in pair):
+                if not all(spot in first and spot not in self.opened for spot in pair):
                     continue
                 inverse = self.builder.fold(Op.ADD, [emit(Op.MUL, column[i], column[j]) for column in columns])
                 value = emit(Op.SUB, emit(Op.MUL, first[pair[0]], first[pair[1]]), inverse)
