@@ -21,6 +21,7 @@ PATHWISE, LIKELIHOOD, MIXED = "pathwise", "likelihood ratio", "mixed"
 GAMMAS = {PATHWISE: "likelihood ratio of the pathwise delta", LIKELIHOOD: "second-order likelihood ratio",
           MIXED: "mixed: likelihood ratio of the pathwise delta, second-order where payments jump"}
 COMPARED = (Op.LT, Op.LE, Op.EQ, Op.NE)
+SINGULAR = 1e-14  # an own variance below this share of the whole
 MOST_DRAWS = 64  # where every payment is smooth; the variance of a likelihood ratio grows with the steps
 
 
@@ -66,7 +67,7 @@ def methods(ready: Ready, market: Market, asked: str) -> Methods:
     jumping = [payment for payment in paid if found[payment]]
     smooth = [payment for payment in paid if not found[payment]]
     places = tuple({(jump.kind, jump.place): jump for payment in jumping for jump in found[payment]}.values())
-    still = without_own_randomness(tape, dict(zip(tape.leaves, values, strict=True)), contract)
+    still = without_own_randomness(dict(zip(tape.leaves, values, strict=True)), contract)
 
     def method(name: str, pathwise: list[int], likelihood: list[int]) -> Method:
         engine = Differentiator.of(tape, unrolled.grid, contract, known, pathwise=pathwise, likelihood=likelihood,
@@ -87,7 +88,8 @@ def methods(ready: Ready, market: Market, asked: str) -> Methods:
     valid = []
     if asked != "likelihood" and not jumping:
         valid.append(method(PATHWISE, smooth, []))
-    if asked in ("auto", "mixed") and jumping and smooth and not still:
+    drawn = [payment for payment in smooth if known[payment] is None]
+    if asked in ("auto", "mixed") and jumping and drawn and not still:
         valid.append(method(MIXED, smooth, jumping))
     few = tape.normals + tape.uniforms <= MOST_DRAWS
     wanted = {"pathwise": False, "likelihood": True, "mixed": not valid, "auto": bool(jumping) or few}[asked]
@@ -96,12 +98,17 @@ def methods(ready: Ready, market: Market, asked: str) -> Methods:
     return Methods(tuple(valid), places, reason)
 
 
-def without_own_randomness(tape: Tape, values: dict[Leaf, float], contract: Contract) -> str:
-    """Why the paths have no density: an asset that does not move by itself; '' where all do."""
+def without_own_randomness(values: dict[Leaf, float], contract: Contract) -> str:
+    """Why the paths have no density: an asset that does not move by itself, or as good as not; '' where all do."""
+    variances: dict[tuple[int, float], float] = {}
     for leaf, value in values.items():
-        if leaf.kind is LeafKind.FACTOR and leaf.asset == leaf.other and value == 0.0:
-            return (f"{contract.assets[leaf.asset]} has no randomness of its own between {leaf.start:.6g}y and "
-                    f"{leaf.end:.6g}y: no vol there, or a singular correlation matrix")
+        if leaf.kind is LeafKind.FACTOR:
+            variances[leaf.asset, leaf.end] = variances.get((leaf.asset, leaf.end), 0.0) + value**2
+    for leaf, value in values.items():
+        if leaf.kind is LeafKind.FACTOR and leaf.asset == leaf.other:
+            if value**2 <= SINGULAR * variances[leaf.asset, leaf.end]:
+                return (f"{contract.assets[leaf.asset]} has no randomness of its own between {leaf.start:.6g}y and "
+                        f"{leaf.end:.6g}y: no vol there, or a singular correlation matrix")
     return ""
 
 

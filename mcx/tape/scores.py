@@ -117,32 +117,31 @@ class _Scores:
         return self.numbers[self.tape.instructions[self.tape.instructions[bridge].operands[2]].payload.end]
 
     def step(self, number: int) -> None:
-        """The scores of one step. Assets beyond the last that moves are left out; one before it that nothing reads any
-        more is kept, and its own leaves have no effect."""
+        """The scores of one step, by the logs that are read: the normal of another asset is noise of its own, and the
+        rest is taken given that noise."""
         emit, assets = self.builder.emit, self.grid.assets
         span = {"start": self.grid.times[number - 1], "end": self.grid.times[number]}
         moving = [row for row, asset in enumerate(assets) if Leaf(LeafKind.DRIFT, asset, **span) in self.leaves]
         if not moving:
             return
-        size = moving[-1] + 1
-        factors = [[Leaf(LeafKind.FACTOR, assets[i], assets[j], **span) for j in range(i + 1)] for i in range(size)]
-        lower = [[self.builder.leaf(leaf) for leaf in row] for row in factors]
-        draws = [self.builder.input(Op.NORMAL, (number - 1) * len(assets) + row) for row in range(size)]
-        inverse = [emit(Op.DIV, self.builder.constant(1.0), lower[row][row]) for row in range(size)]
-        solved = self._solved(lower, inverse, draws)
+        factors = {(i, j): Leaf(LeafKind.FACTOR, assets[i], assets[j], **span) for i in moving for j in range(i + 1)}
+        lower = [[self.builder.leaf(factors[i, j]) for j in moving if j <= i] for i in moving]
+        draws = {j: self.builder.input(Op.NORMAL, (number - 1) * len(assets) + j) for _, j in factors}
+        inverse = [emit(Op.DIV, self.builder.constant(1.0), row[-1]) for row in lower]
+        solved = dict(zip(moving, self._solved(lower, inverse, [draws[i] for i in moving]), strict=True))
         for i in moving:
             self.first.append(Score(Leaf(LeafKind.DRIFT, assets[i], **span), solved[i], number))
-            for j in range(i + 1):
-                value = emit(Op.MUL, solved[i], draws[j])
-                value = emit(Op.SUB, value, inverse[i]) if i == j else value
-                self.first.append(Score(factors[i][j], value, number))
+        for (i, j), leaf in factors.items():
+            value = emit(Op.MUL, solved[i], draws[j])
+            value = emit(Op.SUB, value, inverse[moving.index(i)]) if i == j else value
+            self.first.append(Score(leaf, value, number))
         if number == 1:
-            columns = [self._solved(lower, inverse, [self.builder.constant(float(k == j)) for k in range(size)])
-                       for j in range(size)]
-            for i in moving:
+            columns = [self._solved(lower, inverse, [self.builder.constant(float(k == j)) for k in moving])
+                       for j in moving]
+            for row, i in enumerate(moving):
                 self.spots[assets[i]] = solved[i]
-                for j in moving:
-                    products = [emit(Op.MUL, column[i], column[j]) for column in columns]
+                for other, j in enumerate(moving):
+                    products = [emit(Op.MUL, column[row], column[other]) for column in columns]
                     self.precision[assets[i], assets[j]] = self.builder.fold(Op.ADD, products)
 
     def _solved(self, lower: list[list[int]], inverse: list[int], right: list[int]) -> list[int]:
