@@ -76,11 +76,11 @@ def _keys(scrambles: int, coordinates: int, seed: int, stream: int) -> np.ndarra
 
 
 @jit
-def fill_draws(registers, words, runs, room, numbers, drawing):
+def fill_draws(registers, words, runs, numbers, drawing):
     """Rows 0 .. normals-1: standard normals; the next `uniforms` rows: uniforms in (0, 1), 2^-32 apart.
 
     registers  (rows, at least lanes) float64, written
-    words      (4, lanes) int32, runs (lanes / 64,) int64 and room (LEADING, 64) float64: to work in
+    words      (4, lanes) int32 and runs (lanes / 64,) int64: to work in
     numbers    (lanes,) uint64, path numbers
     """
     lanes, net = words.shape[1], drawing.directions.shape[0] > 0
@@ -99,7 +99,7 @@ def fill_draws(registers, words, runs, room, numbers, drawing):
             normal_row(registers[row], word, lanes)
         else:
             _uniform_row(registers[row], word, lanes)
-    mix(registers, room, drawing.left, drawing.right, drawing.pairs, drawing.turns, lanes)
+    mix(registers, drawing.left, drawing.right, drawing.pairs, drawing.turns, lanes)
 
 
 @jit
