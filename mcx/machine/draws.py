@@ -17,6 +17,7 @@ from mcx.machine.jit import jit
 from mcx.machine.mixing import mix
 from mcx.machine.nets import fill_net, find_runs
 from mcx.machine.philox import fill_words
+from mcx.machine.rows import borrowed, wide_vectors
 from mcx.machine.sizes import GROUP
 from mcx.machine.special import normal_row
 
@@ -83,7 +84,10 @@ def fill_draws(registers, words, runs, numbers, drawing):
     words      (4, lanes) int32 and runs (lanes / 64,) int64: to work in
     numbers    (lanes,) uint64, path numbers
     """
-    lanes, net = words.shape[1], drawing.directions.shape[0] > 0
+    wide_vectors()
+    registers, words = borrowed(registers), borrowed(words)
+    table, low, keys = borrowed(drawing.directions), borrowed(drawing.low), borrowed(drawing.keys)
+    lanes, net = words.shape[1], table.shape[0] > 0
     if net:
         find_runs(runs, numbers)
     for row in range(drawing.normals + drawing.uniforms):
@@ -91,7 +95,7 @@ def fill_draws(registers, words, runs, numbers, drawing):
         dimension = row if normal else row - drawing.normals
         word = words[dimension % 4]
         if net:
-            fill_net(word, numbers, runs, drawing.directions[row], drawing.low[row], drawing.keys[row])
+            fill_net(word, numbers, runs, table[row], low[row], keys[row])
         elif dimension % 4 == 0:
             block = np.uint64(dimension // 4 + (0 if normal else _UNIFORM_BLOCKS))
             fill_words(words, numbers, drawing.seed, block, drawing.stream)
@@ -105,5 +109,6 @@ def fill_draws(registers, words, runs, numbers, drawing):
 @jit
 def _uniform_row(u, words, lanes):
     """u = (k + 1/2) / 2^32, from words k - 2^31 (int32)."""
+    wide_vectors()
     for i in range(lanes):
         u[i] = (words[i] + 2147483648.5) * 2.0**-32

@@ -6,12 +6,14 @@ It goes through 64 lanes at a time, whose normals stay in the first-level cache 
 from __future__ import annotations
 
 from mcx.machine.jit import jit
+from mcx.machine.rows import borrowed
 from mcx.machine.vectors import BENT, TURNED, bend, turn
 
 
 @jit
 def mix(registers, left, right, pairs, turns, lanes):
     """Rows of normals, mixed as `PathOrder` says; lanes: a multiple of 64."""
+    left, right = borrowed(left), borrowed(right)
     assets = left.shape[0]
     for start in range(0, lanes, TURNED):
         for asset in range(assets):

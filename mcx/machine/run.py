@@ -119,7 +119,7 @@ def run(
         try:
             for first in range(0, paths, batch):
                 count = min(batch, paths - first)
-                numbers = np.arange(first_path + first, first_path + first + count, dtype=np.uint64)
+                numbers = range(first_path + first, first_path + first + count)
                 means, squares, bad = crew.run(numbers)
                 _refuse_bad(bad, numbers, code, seed, stream)
                 totals.add(count, means, squares)
@@ -254,7 +254,7 @@ def _crew(code: KernelCode, seed: int, stream: int, threads: int | None, lanes: 
     return Crew(code, seed, stream, threads or available_threads(), lanes, plan)
 
 
-def _refuse_bad(bad: np.ndarray, numbers: np.ndarray, code: KernelCode, seed: int, stream: int) -> None:
+def _refuse_bad(bad: np.ndarray, numbers: range | np.ndarray, code: KernelCode, seed: int, stream: int) -> None:
     found = np.flatnonzero(bad >= 0)
     if len(found):
         path, output = divmod(int(bad[found[0]]), len(code.outputs))
