@@ -28,7 +28,7 @@ from mcx.tape.steps import Grid
 # t intervals of 16 scrambles cover 92.5 % then, of 32 scrambles 94 %. More would leave each too few points.
 SCRAMBLES = 32
 FEWEST_POINTS = 64
-SAME = 1e6  # means closer than this part of one path's share are one mean
+SAME = 1e-5  # of one path's share in a mean: means closer than that are one
 
 
 class Order(Enum):
@@ -120,8 +120,8 @@ def _deviation(means: np.ndarray, part: float) -> float:
     estimation of binomial proportions", The American Statistician 52 (1998), 119-126), times the jump.
     """
     found = float(means.std(ddof=1))
-    counts = np.unique(np.round(means / part * SAME) if part > 0.0 else means, return_counts=True)[1]
-    odd = len(means) - int(counts.max())
+    middle = np.sort(means)[len(means) // 2]
+    odd = int(np.sum(np.abs(means - middle) > SAME * part))
     if part == 0.0 or 2 * odd > len(means):
         return found
     jump = max(2.0 * part, float(np.ptp(means)))

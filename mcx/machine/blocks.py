@@ -14,7 +14,7 @@ from concurrent.futures import ThreadPoolExecutor
 
 import numpy as np
 
-from mcx.machine.draw_plan import PLAIN, DrawPlan
+from mcx.machine.draw_plan import PLAIN, SCRAMBLE_BITS, DrawPlan
 from mcx.machine.draws import drawing_of, fill_draws
 from mcx.machine.forward import forward
 from mcx.machine.jit import jit
@@ -108,6 +108,7 @@ class Crew:
         self.code = code
         self.lanes = lanes or lanes_for(code.rows)
         self.threads = threads
+        self._scrambles = plan.scrambles
         self._drawing = drawing_of(plan, code.normals, code.uniforms, seed, stream)
         self._rooms = deque(self._room() for _ in range(threads))
         self._pool = ThreadPoolExecutor(threads) if threads > 1 else None
@@ -124,8 +125,12 @@ class Crew:
     ) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
         """Means, squares, first bad value and sums of each group of the given path numbers, as `sweep` writes them.
 
-        numbers a range, or (paths,) uint64; values (paths, outputs) float64 is filled if given.
+        numbers a range upwards, or (paths,) uint64; values (paths, outputs) float64 is filled if given. Raises
+        ValueError for a path that is no point of the plan's scrambles.
         """
+        last = numbers[-1] if isinstance(numbers, range) else numbers.max(initial=0)
+        if self._scrambles and int(last) >> SCRAMBLE_BITS >= self._scrambles:
+            raise ValueError(f"path {last} is in none of {self._scrambles} scrambles")
         paths, outputs = len(numbers), len(self.code.outputs)
         groups, blocks = -(-paths // GROUP), -(-paths // self.lanes)
         means, squares = np.empty((groups, outputs)), np.empty((groups, outputs))

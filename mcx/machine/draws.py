@@ -69,8 +69,9 @@ def _keys(scrambles: int, coordinates: int, seed: int, stream: int) -> np.ndarra
     """What scrambles each coordinate, (coordinates, scrambles, 2) uint32: the words of a generator of the same family
     as the paths' but of twice the width, which no other stream, seed or scramble shares."""
     keys = np.empty((coordinates, scrambles, 2), dtype=np.uint32)
+    run = np.array([seed, stream], dtype=np.uint64)  # a list of large numbers would become one of floats
     for scramble in range(scrambles):
-        words = np.random.Philox(key=[seed, stream], counter=[0, 0, scramble, 0]).random_raw(coordinates)
+        words = np.random.Philox(key=run, counter=[0, 0, scramble, 0]).random_raw(coordinates)
         keys[:, scramble, 0] = words & np.uint64((1 << DIGITS) - 1)
         keys[:, scramble, 1] = (words >> np.uint64(DIGITS)).astype(np.uint32) | _ODD
     return keys

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from mcx.machine.draw_plan import PLAIN, DrawPlan
 from mcx.machine.forms import Form
 from mcx.machine.prepare import KernelCode, prepare
 from mcx.tape.program import Program
@@ -16,6 +17,7 @@ GROUP = 64  # paths that are summed together, whatever the block
 BATCHES = 64  # parts of a run: group g of 64 paths belongs to part g mod 64, so that the parts grow together
 
 _NORMAL, _UNIFORM, _OUTPUT = 2.7, 0.9, 0.8
+_NET, _TURN, _BEND = -0.35, 0.3, 0.3  # a net's word beside a random one; a turn of a path order; a normal bent by it
 _USUAL = 0.17
 _DEAR = {
     Form.DIV_RR: 0.42,
@@ -42,9 +44,12 @@ def nanoseconds(code: KernelCode) -> float:
     return _NORMAL * code.normals + _UNIFORM * code.uniforms + arithmetic + _OUTPUT * len(code.outputs)
 
 
-def cost(program: Program) -> float:
-    """The cost of one path of a program, to compare programs with."""
-    return nanoseconds(prepare(program))
+def cost(program: Program, plan: DrawPlan = PLAIN) -> float:
+    """The cost of one path of a program, to compare programs and plans with."""
+    drawn = _NET * program.draws if plan.scrambles else 0.0
+    if plan.order is not None:
+        drawn += _TURN * len(plan.order.pairs) + _BEND * (program.normals if plan.order.left.size else 0)
+    return nanoseconds(prepare(program)) + drawn
 
 
 def batch_for(code: KernelCode, lanes: int) -> int:

@@ -125,8 +125,9 @@ def test_more_scrambles_leave_the_first_as_they_are():
 
 
 def test_seeds_and_streams_scramble_anew():
-    """Another seed (in either half) or stream gives other points throughout."""
+    """Another seed (in either half, and among the largest) or stream gives other points throughout."""
     made = program([], rows=4, outputs=[0], normals=4)
-    asked = [(SEED, 0), (SEED + 1, 0), (SEED ^ 1 << 63, 0), (SEED, 1)]
+    largest = (1 << 64) - 1
+    asked = [(SEED, 0), (SEED + 1, 0), (SEED ^ 1 << 63, 0), (SEED, 1), (largest, 0), (largest - 1, 0)]
     found = [draws(made, seed=s, stream=k, numbers=range(64), plan=DrawPlan(1)) for s, k in asked]
-    assert len(np.unique(found)) == 4 * 4 * 64
+    assert len(np.unique(found)) == len(asked) * 4 * 64

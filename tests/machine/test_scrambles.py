@@ -7,8 +7,9 @@ import pytest
 from made_programs import SEED, asian, program
 
 from mcx.machine.draw_plan import SCRAMBLE_BITS, DrawPlan
-from mcx.machine.orders import bridge
+from mcx.machine.orders import bridge, components
 from mcx.machine.run import NonFinitePath, ScrambleSums, levels, run, run_scrambles
+from mcx.machine.sizes import cost
 from mcx.tape.ops import Op
 
 MADE = asian(6)
@@ -89,8 +90,26 @@ def test_a_bad_path_is_named():
     assert np.isfinite(before).all()
 
 
+@pytest.mark.parametrize("number", [5 << SCRAMBLE_BITS, (1 << 64) - 1])
+def test_paths_of_no_scramble_are_refused(number: int):
+    """The kernel would read keys that are not there."""
+    with pytest.raises(ValueError, match="in none of 5 scrambles"):
+        levels(MADE, seed=SEED, plan=PLAN, numbers=[3, number, 4])
+    with pytest.raises(ValueError, match="in none of 5 scrambles"):
+        run(MADE, seed=SEED, plan=PLAN, first_path=number - 64, paths=65)
+
+
 @pytest.mark.parametrize("points", [0, 65])
 def test_parts_of_groups_are_refused(points: int):
     """A scramble is a whole number of groups."""
     with pytest.raises(ValueError, match="whole groups of 64 points"):
         run_scrambles(MADE, seed=SEED, plan=PLAN, points=points)
+
+
+def test_what_plans_cost():
+    """Points are cheaper than random numbers, and an order costs by its steps: at most a tenth of an Asian call."""
+    made, clock = asian(52), np.full((52, 1), 0.01)
+    plans = [DrawPlan(9), DrawPlan(9, bridge(clock)), DrawPlan(9, components(clock))]
+    net, bridged, leading = (cost(made, plan) / cost(made) for plan in plans)
+    assert net < bridged < leading < 1.1 and net < 1.0
+    assert cost(made, DrawPlan(0, plans[1].order)) - cost(made) == pytest.approx(51 * 0.3)
