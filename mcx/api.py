@@ -13,10 +13,11 @@ from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from mcx.checked.load import Request, checked_request, request
+from mcx.checked.load import Request, checked_request
 from mcx.dates.dated_contract import DatedContract
 from mcx.dates.dating import date_contract
 from mcx.faults import Fault, InputError, Place, Refusal, RequestError, did_you_mean
+from mcx.text.documents import read_documents
 from mcx.text.located import Document
 
 if TYPE_CHECKING:
@@ -70,7 +71,7 @@ def price(
     if record is not None and not table.interrupted:
         from mcx.report.record import make_record, write_record
 
-        write_record(record, make_record(_sources(made), "price", [each.to_dict() for each in table.prices]))
+        write_record(record, make_record(_sources(made), [each.to_dict() for each in table.prices]))
     return table.prices[0] if len(made.contracts) == 1 else table
 
 
@@ -100,14 +101,12 @@ def greeks(
     are those of `price`; `within` is about the price. Raises InputError, RequestError, Refusal.
     """
     from mcx.estimators.batches import check_paths
-    from mcx.estimators.greeks import Wish
     from mcx.estimators.plan import DEFAULT_SEED, check_fits, precision
-    from mcx.estimators.wishes import bump_of, estimator_of, moves_of
+    from mcx.estimators.wishes import wish_of
 
     asked = precision(paths, within, seconds)
     check_paths(asked.paths)
-    wish = Wish(estimator_of(estimator), bump_of(bump), tuple(assets), moves_of(spot_moves, "spot"),
-                moves_of(vol_moves, "vol"))
+    wish = wish_of(estimator, bump, assets, spot_moves, vol_moves)
     seed = DEFAULT_SEED if seed is None else _seed(seed)
     threads = _threads(threads)
     _reduction(reduction)
@@ -125,7 +124,7 @@ def greeks(
     if record is not None:
         from mcx.report.record import make_record, write_record
 
-        write_record(record, make_record(_sources(made), "greeks", [each.to_dict() for each in table.contracts]))
+        write_record(record, make_record(_sources(made), [each.to_dict() for each in table.contracts], "greeks"))
     return table.contracts[0] if len(made.contracts) == 1 else table
 
 
@@ -197,16 +196,17 @@ def replay(
 
     threads = _threads(threads)
     stored = read_record(file)
-    made, faults = checked_request(documents_of(stored))
+    made, faults = checked_request(*documents_of(stored))
     dated = _all_dated(made, faults)
     runs = stored["request"]
+    if made.market is None or len(runs) != len(dated):
+        raise RequestError(f"{file}: the record has {len(runs)} requests for the {len(dated)} contracts in its inputs")
     asked = [precision(each["paths"], None, None) for each in runs]
-    seeds = [each["seed"] for each in runs]
+    seeds = [_seed(each["seed"]) for each in runs]
     if stored.get("verb", "price") == "greeks":
-        from mcx.estimators.greeks import Wish
+        from mcx.estimators.wishes import wish_of
 
-        wishes = [Wish(each["estimator"], each["bump"], *(tuple(each[key]) for key in ("assets", "spot_moves", "vol_moves")))
-                  for each in runs]
+        wishes = [wish_of(*(each[key] for key in ("estimator", "bump", "assets", "spot_moves", "vol_moves"))) for each in runs]
         results = _greeks(made, dated, wishes, asked, seeds, threads, progress, notice).contracts
     else:
         table = _price(made, dated, asked, seeds, threads, progress, notice)
@@ -220,12 +220,13 @@ def _dated(files: Sequence[File], *, with_market: bool) -> tuple[Request, list[D
     """The documents of the files and their contracts with every date, all sound."""
     if not files:
         raise RequestError("no files are given")
-    made, faults = request(files)
+    documents, unread = read_documents(files)
+    made, faults = checked_request(documents, unread)
     kinds = {document.kind for document in made.documents}
     names = ", ".join(map(str, files))
     missing = [("contract", CONTRACT_BEGINS), ("market", MARKET_BEGINS)][: 1 + with_market]
     for kind, begins in missing:
-        if kind not in kinds and not any(fault.place.line == 1 == fault.place.column for fault in faults):
+        if kind not in kinds and not unread:  # else it may stand in what could not be read
             faults.append(Fault(Place(str(files[0]), 1, 1), f"no {kind} in {names}; expected {begins}"))
     return made, _all_dated(made, faults)
 
@@ -239,8 +240,18 @@ def _all_dated(made: Request, faults: Iterable[Fault]) -> list[DatedContract]:
         if found is not None:
             dated.append(found)
     if faults:
-        raise InputError(faults)
+        raise InputError([*faults, *_watches_refused(dated)])
     return dated
+
+
+def _watches_refused(dated: Iterable[DatedContract]) -> list[Fault]:
+    """The continuous watches that cannot be simulated, so that they are told beside the faults of the documents."""
+    watched = [each for each in dated if each.watches]
+    if not watched:
+        return []
+    from mcx.tape.unroll import unroll
+
+    return [fault for each in watched for fault in unroll(each, nodes=()).faults]
 
 
 def _price(
@@ -252,19 +263,24 @@ def _price(
     progress: Progress | None,
     notice: Callable[[str], None] | None,
 ) -> PriceTable:
-    """Every contract valued; after an interruption those so far."""
+    """Every contract valued; after an interruption those so far. Raises KeyboardInterrupt if that is none."""
     from mcx.estimators.price import value
     from mcx.report.results import PriceTable
     from mcx.report.summary import price_result
 
     results = []
     for ready, wish, seed in zip(_ready(made, dated), asked, seeds, strict=True):
-        with _finite(ready):
-            valuation = value(ready, wish, seed=seed, threads=threads, progress=progress, notice=notice)
+        try:
+            with _finite(ready):
+                valuation = value(ready, wish, seed=seed, threads=threads, progress=progress, notice=notice)
+        except KeyboardInterrupt:
+            if not results:
+                raise
+            break
         results.append(price_result(ready, made.market, valuation))
         if valuation.interrupted:
             break
-    return PriceTable(tuple(results))
+    return PriceTable(tuple(results), tuple(each.contract.title for each in dated[len(results):]))
 
 
 def _greeks(
@@ -376,5 +392,5 @@ def _threads(threads: object) -> int | None:
 
 def _reduction(reduction: str) -> None:
     if reduction not in REDUCTIONS:
-        raise RequestError(f"the variance reduction '{reduction}' is not known to this version; it knows 'none', others "
-                           f"come with a later version")
+        raise RequestError(f"the variance reduction '{reduction}' is not known to this version; it knows 'none', "
+                           f"others come with a later version")

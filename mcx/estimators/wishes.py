@@ -6,13 +6,20 @@ import math
 import re
 from collections.abc import Sequence
 
-from mcx.estimators.greeks import ESTIMATORS
+from mcx.estimators.greeks import ESTIMATORS, Wish
 from mcx.faults import RequestError, did_you_mean
 
 SHARE = re.compile(r"([+-]?[0-9]*\.?[0-9]+(?:[eE][+-]?[0-9]+)?)\s*(%|bp)?")
 UNITS = {"%": 1e-2, "bp": 1e-4}
 LARGEST_BUMP = 0.5
 MOST_MOVES = 101
+
+
+def wish_of(estimator: str, bump: str | float | None, assets: Sequence[str], spot_moves: Sequence[str | float],
+            vol_moves: Sequence[str | float]) -> Wish:
+    """A whole request; raises RequestError for what has no meaning."""
+    return Wish(estimator_of(estimator), bump_of(bump), tuple(assets), moves_of(spot_moves, "spot"),
+                moves_of(vol_moves, "vol"))
 
 
 def estimator_of(name: str) -> str:

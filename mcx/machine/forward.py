@@ -11,6 +11,7 @@ import numpy as np
 from mcx.machine.bits import sum_products, sum_values
 from mcx.machine.forms import Form
 from mcx.machine.jit import jit
+from mcx.machine.rows import borrowed, wide_vectors
 from mcx.machine.sizes import GROUP
 from mcx.machine.special import exp_row, log_row
 
@@ -36,6 +37,8 @@ def forward(registers, code, scalars, lanes, paths, sums):
 
 @jit
 def _arithmetic(form, y, registers, scalars, a, b, lanes):
+    wide_vectors()
+    registers, scalars = borrowed(registers), borrowed(scalars)
     if form == Form.FILL_S:
         s = scalars[a]
         for i in range(lanes):
@@ -112,6 +115,8 @@ def _arithmetic(form, y, registers, scalars, a, b, lanes):
 
 @jit
 def _logic(form, y, registers, scalars, a, b, c, lanes):
+    wide_vectors()
+    registers, scalars = borrowed(registers), borrowed(scalars)
     if form == Form.LT_RR:
         p, q = registers[a], registers[b]
         for i in range(lanes):
@@ -177,6 +182,8 @@ def _logic(form, y, registers, scalars, a, b, c, lanes):
 
 @jit
 def _model(form, y, registers, scalars, a, b, c, d, lanes):
+    wide_vectors()
+    registers, scalars = borrowed(registers), borrowed(scalars)
     if form == Form.STEP_RSR:
         x, s, z = registers[a], scalars[b], registers[c]
         for i in range(lanes):

@@ -122,8 +122,7 @@ def run(
         try:
             for first in range(0, paths, batch):
                 count = min(batch, paths - first)
-                numbers = np.arange(first_path + first, first_path + first + count, dtype=np.uint64)
-                means, squares, bad, sums = crew.run(numbers)
+                means, squares, bad, sums = crew.run(range(first_path + first, first_path + first + count))
                 _refuse_bad(bad, first_path + first, code, seed, stream)
                 _refuse_bad_sum(sums, first_path + first, seed, stream)
                 totals.add(count, means, squares)
