@@ -1,20 +1,20 @@
 """Scores: the derivative of the log density of a path by every leaf of the model, as values of the tape.
 
-A path is the logs of all levels on the grid, and the extremes of its bridges. Where the payoff jumps, the derivative of
-the price by a leaf is the mean of payoff times score, the path held fixed, plus that of what the payoff reads of the leaf
-openly (P. Glasserman, "Monte Carlo Methods in Financial Engineering", 2003, section 7.3): sweep the payoff with
-`Scores.held`, and add.
+A path is the logs of all levels on the grid, and the extremes of its bridges. Where the payoff jumps, the derivative
+of the price by a leaf is the mean of payoff times score, the path held fixed, plus that of what the payoff reads of
+the leaf openly (P. Glasserman, "Monte Carlo Methods in Financial Engineering", 2003, section 7.3): sweep the payoff
+with `Scores.held`, and add.
 
-A step moves the logs by m + L z, with L lower triangular. With w = L^-T z the score of a drift is w_i and that of a factor
-w_i z_j, less 1 / L_ii on the diagonal; that of the starting log is w_i of the first step. Where a log of the step is
-not on the tape, since nothing reads it, its normal is noise of its own: the rest is taken given that noise.
+A step moves the logs by m + L z, with L lower triangular. With w = L^-T z the score of a drift is w_i and that of a
+factor w_i z_j, less 1 / L_ii on the diagonal; that of the starting log is w_i of the first step. Where a log of the
+step is not on the tape, since nothing reads it, its normal is noise of its own: the rest is taken given that noise.
 
-The extreme of a bridge has P(min <= m) = exp(-2 (x0 - m)(x1 - m) / v), and by the variance v the score (-1 - log u) / v.
-By x0, which is a leaf in the first step, it has none: the extreme cannot pass x0, so its range moves. But a payoff that
-asks only whether certain barriers were passed depends on the interval between barriers where the extreme lies, and
-the probability of that has a derivative by x0. An extreme that is read as a number and compared with nothing is not held
-in that step: its derivative is the payoff's own. Where it is both, or compared with what is random, there is no score by
-that asset's spot.
+The extreme of a bridge has P(min <= m) = exp(-2 (x0 - m)(x1 - m) / v), and by the variance v the score (-1 - log u) /
+v. By x0, which is a leaf in the first step, it has none: the extreme cannot pass x0, so its range moves. But a payoff
+that asks only whether certain barriers were passed depends on the interval between barriers where the extreme lies,
+and the probability of that has a derivative by x0. An extreme that is read as a number and compared with nothing is
+not held in that step: its derivative is the payoff's own. Where it is both, or compared with what is random, there is
+no score by that asset's spot.
 """
 
 from __future__ import annotations
@@ -79,8 +79,8 @@ def singular(tape: Tape, leaf_values: Sequence[float] | np.ndarray) -> tuple[Lea
 def scores(builder: Builder, values: Iterable[int], second: bool = False) -> Scores:
     """The scores of that part of a path which decides the values, appended to the tape under construction.
 
-    The tape is expanded (`steps.py`) and has no adjoint yet. What comes after the values are decided has a score of mean
-    0 whatever they are, and is left out.
+    The tape is expanded (`steps.py`) and has no adjoint yet. What comes after the values are decided has a score of
+    mean 0 whatever they are, and is left out.
     """
     return _Scoring(builder, frozenset(values)).run(second)
 
@@ -199,8 +199,8 @@ class _Scoring:
 
     def _bridge(self, number: int, first: dict[int, int], held: set[int], refused: dict[int, Place | None],
                 sloped: dict[int, int], curved: dict[int, int]) -> None:
-        """The scores of one extreme. `sloped` and `curved` take, by starting log, the first and second derivative of its
-        interval's probability, over the probability."""
+        """The scores of one extreme. `sloped` and `curved` take, by starting log, the first and second derivative of
+        its interval's probability, over the probability."""
         emit, constant = self.builder.emit, self.builder.constant
         x0, _, variance, u = self.steps[number].operands
         uses = self._uses(number) if self.uniform[x0] else None
