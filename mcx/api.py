@@ -71,7 +71,7 @@ def price(
     if record is not None and not table.interrupted:
         from mcx.report.record import make_record, write_record
 
-        write_record(record, make_record(_sources(made), "price", [each.to_dict() for each in table.prices]))
+        write_record(record, make_record(_sources(made), [each.to_dict() for each in table.prices]))
     return table.prices[0] if len(made.contracts) == 1 else table
 
 
@@ -79,9 +79,9 @@ def greeks(
     *files: File,
     estimator: str = "auto",
     bump: str | float | None = None,
-    assets: Sequence[str] = (),
-    spot_moves: Sequence[str | float] = (),
-    vol_moves: Sequence[str | float] = (),
+    assets: str | Sequence[str] = (),
+    spot_moves: str | Sequence[str | float] = (),
+    vol_moves: str | Sequence[str | float] = (),
     paths: int | None = None,
     within: str | float | None = None,
     seconds: float | None = None,
@@ -101,14 +101,12 @@ def greeks(
     are those of `price`; `within` is about the price. Raises InputError, RequestError, Refusal.
     """
     from mcx.estimators.batches import check_paths
-    from mcx.estimators.greeks import Wish
     from mcx.estimators.plan import DEFAULT_SEED, check_fits, precision
-    from mcx.estimators.wishes import bump_of, estimator_of, moves_of
+    from mcx.estimators.wishes import wish_of
 
     asked = precision(paths, within, seconds)
     check_paths(asked.paths)
-    wish = Wish(estimator_of(estimator), bump_of(bump), tuple(assets), moves_of(spot_moves, "spot"),
-                moves_of(vol_moves, "vol"))
+    wish = wish_of(estimator, bump, assets, spot_moves, vol_moves)
     seed = DEFAULT_SEED if seed is None else _seed(seed)
     threads = _threads(threads)
     _reduction(reduction)
@@ -126,7 +124,7 @@ def greeks(
     if record is not None:
         from mcx.report.record import make_record, write_record
 
-        write_record(record, make_record(_sources(made), "greeks", [each.to_dict() for each in table.contracts]))
+        write_record(record, make_record(_sources(made), [each.to_dict() for each in table.contracts], "greeks"))
     return table.contracts[0] if len(made.contracts) == 1 else table
 
 
@@ -206,10 +204,9 @@ def replay(
     asked = [precision(each["paths"], None, None) for each in runs]
     seeds = [_seed(each["seed"]) for each in runs]
     if stored.get("verb", "price") == "greeks":
-        from mcx.estimators.greeks import Wish
+        from mcx.estimators.wishes import wish_of
 
-        wishes = [Wish(each["estimator"], each["bump"], *(tuple(each[key]) for key in ("assets", "spot_moves", "vol_moves")))
-                  for each in runs]
+        wishes = [wish_of(*(each[key] for key in ("estimator", "bump", "assets", "spot_moves", "vol_moves"))) for each in runs]
         results = _greeks(made, dated, wishes, asked, seeds, threads, progress, notice).contracts
     else:
         table = _price(made, dated, asked, seeds, threads, progress, notice)

@@ -22,7 +22,7 @@ if TYPE_CHECKING:
 
 NO, WRONG, INTERRUPTED = 1, 2, 130
 
-MOVES = tuple(f"{move}%" for move in range(-5, 6))  # of a ladder or grid, where none are named
+MOVES = "-5%,-4%,-3%,-2%,-1%,0,1%,2%,3%,4%,5%"  # of a ladder or grid, where none are named
 
 FILES = click.argument("files", nargs=-1, required=True, metavar="FILES…")
 AS_JSON = click.option("--json", "as_json", is_flag=True, help="One JSON object, full precision.")
@@ -122,7 +122,7 @@ def greeks(files: tuple[str, ...], as_json: bool, ladder: bool, grid: bool, spot
 
     if vol_moves is not None and not grid or spot_moves is not None and not (ladder or grid):
         raise click.UsageError("'--spot-moves' goes with '--ladder' or '--grid', '--vol-moves' with '--grid'")
-    moves = {"spot_moves": _moves(spot_moves) if ladder or grid else (), "vol_moves": _moves(vol_moves) if grid else ()}
+    moves = {"spot_moves": spot_moves or MOVES if ladder or grid else (), "vol_moves": vol_moves or MOVES if grid else ()}
     with _progress() as (progress, notice):
         result = api.greeks(*files, progress=progress, notice=notice, **moves, **wishes)
     _show(result, as_json, _greeks_view)
@@ -238,11 +238,6 @@ def _price_view(result: Result, page: Page) -> None:
     from mcx.report.results import PriceTable
 
     (show_prices if isinstance(result, PriceTable) else show_price)(result, page)
-
-
-def _moves(text: str | None) -> tuple[str, ...]:
-    """Moves parted by commas, or the usual ones."""
-    return MOVES if text is None else tuple(move.strip() for move in text.split(","))
 
 
 def _greeks_view(result: Result, page: Page) -> None:

@@ -128,6 +128,7 @@ class Differentiator:
                 controls.append(Sum(edge.weight, None, leaf))
         deltas, curved, extra = [], [], []
         tied: dict[int, tuple[int, ...]] = {}
+        slopes = _by_log_spots(builder, tape, smooth, law.spots) if smooth and second else {}
         total = builder.fold(Op.ADD, pathwise) if pathwise else builder.constant(0.0)
 
         def noted(*sums: Sum) -> tuple[int, ...]:
@@ -139,12 +140,11 @@ class Differentiator:
             crossed, score = (), ()
             if all(asset in law.spots for asset in pair):
                 if smooth:
-                    both = [_crossed(builder, _by_log_spot(builder, tape, smooth, one), other, law)
+                    both = [_crossed(builder, slopes[one], other, law)
                             for one, other in (pair, pair[::-1])]
                     crossed = noted(*both[0], *both[1])
                     if pair[0] == pair[1] and pair[0] not in tied:
-                        delta = _by_log_spot(builder, tape, smooth, pair[0])
-                        tied[pair[0]] = noted(*_crossed(builder, total, pair[0], law), Sum(delta))
+                        tied[pair[0]] = noted(*_crossed(builder, total, pair[0], law), Sum(slopes[pair[0]]))
                 if 1 in later:
                     bend = law.second[pair]
                     score = noted(Sum(later[1], bend), Sum(bend))
@@ -235,12 +235,18 @@ def replaced(builder: Builder, value: int, old: int, new: int) -> int:
     return instead.get(value, value)
 
 
-def _by_log_spot(builder: Builder, tape: Tape, gradient: Gradient, asset: int) -> int:
-    """The derivative by a log spot as a value on each path: the paths read it alone, or with the first drift added."""
-    spot = builder.leaf(Leaf(LeafKind.LOG_SPOT, asset=asset))
-    read = [spot, *(number for number, step in enumerate(tape.instructions)
-                    if step.op is Op.ADD and spot in step.operands)]
-    return on_paths(builder, [part for value in read for part in gradient.get(value, ())])
+def _by_log_spots(builder: Builder, tape: Tape, gradient: Gradient, assets: Iterable[int]) -> dict[int, int]:
+    """By asset the derivative by its log spot as a value on each path: paths read it alone, or with the first drift
+    added."""
+    spots = {asset: builder.leaf(Leaf(LeafKind.LOG_SPOT, asset=asset)) for asset in assets}
+    read = {spot: [spot] for spot in spots.values()}
+    for number, step in enumerate(tape.instructions):
+        if step.op is Op.ADD:
+            for operand in step.operands:
+                if operand in read:
+                    read[operand].append(number)
+    return {asset: on_paths(builder, [part for value in read[spot] for part in gradient.get(value, ())])
+            for asset, spot in spots.items()}
 
 
 def _later(builder: Builder, tape: Tape, grid: Grid, payments: Sequence[int]) -> dict[int, int]:

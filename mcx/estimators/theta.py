@@ -48,6 +48,6 @@ def between(dated: DatedContract) -> Iterator[str]:
 
 
 def _names(moment: Moment) -> str:
-    found = [update.running.name for update in moment.updates]
-    found += [event.event.name or "a payment's date" for event in moment.events]
-    return ", ".join(dict.fromkeys(f"'{name}'" for name in found))
+    found = [f"'{update.running.name}'" for update in moment.updates]
+    found += [f"'{event.event.name}'" if event.event.name else "a payment's date" for event in moment.events]
+    return ", ".join(dict.fromkeys(found))

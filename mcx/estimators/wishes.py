@@ -6,13 +6,21 @@ import math
 import re
 from collections.abc import Sequence
 
-from mcx.estimators.greeks import ESTIMATORS
+from mcx.estimators.greeks import ESTIMATORS, Wish
 from mcx.faults import RequestError, did_you_mean
 
 SHARE = re.compile(r"([+-]?[0-9]*\.?[0-9]+(?:[eE][+-]?[0-9]+)?)\s*(%|bp)?")
 UNITS = {"%": 1e-2, "bp": 1e-4}
 LARGEST_BUMP = 0.5
 MOST_MOVES = 101
+
+
+def wish_of(estimator: str, bump: str | float | None, assets: Sequence[str], spot_moves: Sequence[str | float],
+            vol_moves: Sequence[str | float]) -> Wish:
+    """A whole request; several names or moves may be one text, parted by commas. Raises RequestError for what has no
+    meaning."""
+    return Wish(estimator_of(estimator), bump_of(bump), tuple(_parted(assets)), moves_of(_parted(spot_moves), "spot"),
+                moves_of(_parted(vol_moves), "vol"))
 
 
 def estimator_of(name: str) -> str:
@@ -48,6 +56,10 @@ def moves_of(moves: Sequence[str | float], what: str) -> tuple[float, ...]:
     if len(found) > MOST_MOVES:
         raise RequestError(f"at most {MOST_MOVES} {what} moves at a time, not {len(found)}")
     return tuple(sorted(found))
+
+
+def _parted(values: str | Sequence) -> Sequence:
+    return [part.strip() for part in values.split(",")] if isinstance(values, str) else values
 
 
 def _share(size: str | float) -> float | None:

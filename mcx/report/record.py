@@ -57,7 +57,7 @@ def _version(package: str) -> str:
         return "not installed"
 
 
-def make_record(documents: tuple[Document, ...], verb: str, results: list[dict]) -> dict:
+def make_record(documents: tuple[Document, ...], results: list[dict], verb: str = "price") -> dict:
     """The record of what a verb found about the documents (definitions of the library included)."""
     texts = {document.file: document.text for document in documents}
     record = {
@@ -131,9 +131,10 @@ def _whole(record: Mapping) -> bool:
     """Whether everything is there that a replay reads, one request for each result."""
     match record:
         case {"inputs": [*inputs], "request": [*requests], "results": [*results], "environment": {}}:
+            asked = {"paths", "seed"} if record.get("verb", "price") == "price" else {*REQUEST.get(record["verb"], ("",))}
             return (len(requests) == len(results)
                     and all(isinstance(each, dict) and {"file", "text"} <= each.keys() for each in inputs)
-                    and all(isinstance(each, dict) and {"paths", "seed"} <= each.keys() for each in requests))
+                    and all(isinstance(each, dict) and asked <= each.keys() for each in requests))
     return False
 
 

@@ -1,13 +1,14 @@
-"""What each operation does to an adjoint: the derivative of the result by each operand, times the adjoint of the result.
+"""What each operation does to an adjoint: the derivative of the result by each operand, times the adjoint of the
+result.
 
 A table over the closed list in `ops.py`. A rule is written in the operations themselves, so that one table serves two
 algebras: the builder of a tape, where it appends instructions, and plain numbers.
 
 An operation may be undefined on a lane where nothing depends on it: a branch that was not taken, a contract that has
-ended. The adjoint of its result is 0 there, and 0 times an infinite derivative would be NaN. So wherever a factor may not
-be finite the product is chosen, not computed: `At.safe` is 0 where the adjoint is 0. Where two operands of a minimum or
-maximum are equal the adjoint goes to the first; at 0 the derivative of a root is taken as 0, which matters only where
-its operand stays 0 (the root of max(x, 0)).
+ended. The adjoint of its result is 0 there, and 0 times an infinite derivative would be NaN. So wherever a factor may
+not be finite the product is chosen, not computed: `At.safe` is 0 where the adjoint is 0. Where two operands of a
+minimum or maximum are equal the adjoint goes to the first; at 0 the derivative of a root is taken as 0, which matters
+only where its operand stays 0 (the root of max(x, 0)).
 """
 
 from __future__ import annotations

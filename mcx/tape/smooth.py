@@ -1,13 +1,14 @@
 """Which conditions make a value jump: decided by the tape, for each payment by itself.
 
 A derivative taken path by path is the derivative of the price only where the value has no jumps (P. Glasserman, "Monte
-Carlo Methods in Financial Engineering", 2003, section 7.2). Sums, products, extremes and roots do not jump; a comparison
-does, and so does a division by what may be zero. A comparison is harmless for a value that is the same on both sides where
-the compared numbers are equal: a call's `spot - strike if spot > strike else 0`. That is shown by algebra, on the
-polynomials of `polynomials.py`; what is not shown counts as a jump.
+Carlo Methods in Financial Engineering", 2003, section 7.2). Sums, products, extremes and roots do not jump; a
+comparison does, and so does a division by what may be zero. A comparison is harmless for a value that is the same on
+both sides where the compared numbers are equal: a call's `spot - strike if spot > strike else 0`. That is shown by
+algebra, on the polynomials of `polynomials.py`; what is not shown counts as a jump.
 
 For each comparison the change of every value when it turns is followed through the tape: a polynomial, or UNKNOWN. The
-leaves have their numbers from the market, moved a little so that nothing is equal by accident; the contract's terms stay.
+leaves have their numbers from the market, moved a little so that nothing is equal by accident; the contract's terms
+stay.
 """
 
 from __future__ import annotations

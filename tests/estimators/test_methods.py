@@ -134,7 +134,7 @@ def test_mixed_shares_out_the_payments():
     two = made("spot > 110", "1").replace("---", "  - at: expiry\n    pay: max(spot - 100, 0)\n---", 1)
     for text, asked, expected in (
         (two, "auto", ["mixed", "likelihood ratio"]), (two, "mixed", ["mixed"]),
-        (BARRIER + ONE, "auto", ["likelihood ratio"]), (BARRIER + ONE, "mixed", ["likelihood ratio"]),
+        (DIGITAL + ONE, "auto", ["likelihood ratio"]), (DIGITAL + ONE, "mixed", ["likelihood ratio"]),
         (ASIAN + ONE, "mixed", ["pathwise"]), (ASIAN + ONE, "auto", ["pathwise", "likelihood ratio"]),
     ):
         run, market = ready(text)

@@ -1,4 +1,4 @@
-"""The adjoint: each rule by differences, rules planted wrong, undefined branches, whole tapes, and the way to the leaves."""
+"""The adjoint: rules by differences, rules planted wrong, undefined branches, whole tapes, the way to the leaves."""
 
 from __future__ import annotations
 

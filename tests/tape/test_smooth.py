@@ -1,4 +1,4 @@
-"""Which conditions make a payment jump: formulas one by one, the library, and random payoffs against a search for jumps."""
+"""Which conditions make a payment jump: single formulas, the library, random payoffs against a search for jumps."""
 
 from __future__ import annotations
 
