@@ -39,6 +39,7 @@ class DayRule:
     start: DayRef | None = None
     every: Period | None = None
     count: int | None = None
+    end_of_month: bool = False  # every step is the last day of its month
 
 
 @dataclass(frozen=True, slots=True)
@@ -85,12 +86,18 @@ TermValue: TypeAlias = DayRef | DayRule | DayList | Stretch | Figures | Word
 
 @dataclass(frozen=True, slots=True)
 class BusinessDays:
-    """Which days are good (`holidays`: a financial calendar's name, or 'none' for weekends only) and how others roll
-    ('following', 'modified following', 'preceding')."""
+    """Which days are good and how others roll ('following', 'modified following', 'preceding').
 
-    holidays: str
+    `holidays` are names of financial calendars, or 'none' alone for weekends only, each with its place in `places`; a day
+    is good if all of them are open, or any with `in_any`. `extra` are holidays that the contract lists itself.
+    """
+
+    holidays: tuple[str, ...]
     roll: str
     place: Place
+    places: tuple[Place, ...]
+    in_any: bool = False
+    extra: tuple[datetime.date, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -109,6 +116,7 @@ class Contract:
     day_count: str = ""
     settlement: Period | None = None
     calendar: BusinessDays | None = None
+    payment_calendar: BusinessDays | None = None  # None: payments go by `calendar`
     textbook: bool = False
     text: str = ""
     assumptions: tuple[str, ...] = ()

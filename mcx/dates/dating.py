@@ -14,9 +14,9 @@ from dataclasses import replace
 from mcx.checked.contract import Contract, DayList, DayRef, Figures, Stretch
 from mcx.checked.payoff import At, Continuous, Event, Pay, Running
 from mcx.checked.term_values import DATED_TYPES
-from mcx.dates.business_days import GoodDays, NotCovered, good_days
+from mcx.dates.business_days import NotCovered, good_days
 from mcx.dates.dated_contract import Day, DatedContract, DatedEvent, Moment, Occasion, Update, Watch
-from mcx.dates.day_counts import YEAR_FRACTIONS
+from mcx.dates.day_counts import ICMA, actual_365_fixed, year_fraction
 from mcx.dates.readable import readings
 from mcx.dates.rules import TermDays, part_of
 from mcx.faults import Fault, Place
@@ -33,17 +33,29 @@ def date_contract(
     stated narrow nothing, and nothing happens at them.
     """
     good, faults = good_days(contract.calendar) if contract.calendar else (None, [])
-    if faults:
-        return None, faults
+    paying, more = good_days(contract.payment_calendar) if contract.payment_calendar else (good, [])
+    if faults or more:
+        return None, faults + more
     base = None if contract.textbook else valuation or contract.start.date
-    terms = TermDays(contract, base, good)
+    terms = TermDays(contract, base, good, paying, _payment_terms(contract.payoff))
     schedules = {term.name: terms.of_term(term.name) for term in contract.payoff.terms
                  if term.type in DATED_TYPES and term.name in contract.terms}
     faults = terms.faults + _wrong_lengths(contract, schedules)
     if faults:
         return None, faults
     start = Day(0.0) if contract.textbook else terms.day(contract.start.date)
-    return _Dating(contract, valuation, schedules, start, terms, good).dated()
+    return _Dating(contract, valuation, schedules, start, terms).dated()
+
+
+def _payment_terms(payoff: Payoff) -> frozenset[str]:
+    """The date terms that say when something is paid and nothing else."""
+    pays = {action.due for event in payoff.events for action in (*event.then, *event.otherwise)
+            if isinstance(action, Pay)}
+    watches = [running.at for running in payoff.running if isinstance(running.at, Continuous)]
+    looked = {event.at.name for event in payoff.events} | {end.name for at in watches for end in (at.start, at.end)}
+    looked |= {running.at.name for running in payoff.running if isinstance(running.at, At)}
+    looked |= {name for event in payoff.events for name in (event.since, event.until)}
+    return frozenset(pays - looked)
 
 
 def _wrong_lengths(contract: Contract, schedules: dict[str, tuple[Day, ...]]) -> list[Fault]:
@@ -78,12 +90,13 @@ class _Dating:
     """One contract on its way to a dated one; collects faults as it goes."""
 
     def __init__(self, contract: Contract, valuation: datetime.date | None,
-                 schedules: dict[str, tuple[Day, ...]], start: Day, terms: TermDays, good: GoodDays | None):
+                 schedules: dict[str, tuple[Day, ...]], start: Day, terms: TermDays):
         self.contract, self.payoff, self.valuation = contract, contract.payoff, valuation
-        self.schedules, self.start, self.terms, self.good = schedules, start, terms, good
+        self.schedules, self.start, self.terms = schedules, start, terms
+        self.good, self.paying = terms.observing, terms.paying
         self.positions = _positions(contract, schedules)
         self.faults: list[Fault] = []
-        self.assumptions: list[str] = []
+        self.assumptions: list[str] = list(terms.notes)
         self.updates: dict[Day, list[Update]] = {}
         self.events: dict[Day, list[DatedEvent]] = {}
         self.watches: list[Watch] = []
@@ -103,7 +116,7 @@ class _Dating:
             contract=self.contract, valuation=self.valuation, start=self.start, schedules=self.schedules,
             moments=tuple(Moment(day, tuple(self.updates.get(day, ())), tuple(self.events.get(day, ())))
                           for day in days),
-            watches=tuple(self.watches), calendar_version=self.good.version if self.good else "",
+            watches=tuple(self.watches), calendar_version=self._calendar_version(),
             assumptions=(*self.contract.assumptions, *dict.fromkeys(self.assumptions)))
         live, faults = readings(dated)
         return (None if faults else _only(dated, live)), faults
@@ -112,6 +125,13 @@ class _Dating:
         fault = Fault(place, text)
         if fault not in self.faults:
             self.faults.append(fault)
+
+    def _calendar_version(self) -> str:
+        """The lists of holidays that the dates depend on, with the version of the package."""
+        found = [self.good.version] if self.good and self.good.version else []
+        if self.contract.payment_calendar and self.paying.version:
+            found.append(f"{self.paying.version} for payments")
+        return "; ".join(found)
 
     def _refuse_dates_before_start(self) -> None:
         for name, days in self.schedules.items():
@@ -191,16 +211,32 @@ class _Dating:
                 continue
             found.append(Occasion(
                 day=day, schedule="" if single else at.name, nth=k + 1, n_dates=len(days),
-                period=self._fraction(days[k - 1] if k else self.start, day),
+                period=self._fraction(at.name, days[k - 1] if k else self.start, day, k, k == len(days) - 1),
                 years=day.time - self.start.time if self.contract.textbook else _years(self.start, day),
                 dates=self.positions.get(day, {}), earlier=found[-1].day if found else None))
         return found
 
-    def _fraction(self, before: Day, day: Day) -> float:
+    def _fraction(self, name: str, before: Day, day: Day, number: int, final: bool) -> float:
+        """The year fraction of the period that ends on `day`, the `number`-th date of a term, from 0; nan where it
+        is not known."""
         if self.contract.textbook:
             return day.time - before.time
-        rule = YEAR_FRACTIONS.get(self.contract.day_count)
-        return rule(before.date, day.date) if rule else math.nan
+        if self.contract.day_count == ICMA:
+            return self._regular_fraction(name, number)
+        if not self.contract.day_count:
+            return math.nan
+        return year_fraction(self.contract.day_count, before.date, day.date, final=final)
+
+    def _regular_fraction(self, name: str, number: int) -> float:
+        """By Actual/Actual (ICMA) periods are measured between the dates of the rule before they roll: a regular one
+        is always the same part of a year, the first may be short or long."""
+        found = self.terms.regular(name)
+        if found is None:
+            return math.nan
+        regular, skipped = found
+        if number:
+            return regular.months / 12
+        return year_fraction(ICMA, self.contract.start.date, regular.step(skipped), regular=regular)
 
     def _due(self, pay: Pay, occasion: Occasion) -> Day:
         """When an amount is paid."""
@@ -216,6 +252,8 @@ class _Dating:
                                    "none of them")
             return day
         due = self.schedules[pay.due][position]
+        if self.paying is not None:
+            due = self._rolled_payment(due, pay)
         if due.time < day.time:
             value = self.contract.terms[pay.due]
             listed = isinstance(value, DayList) and len(value.days) > 1
@@ -227,9 +265,18 @@ class _Dating:
         if self.contract.settlement is None:
             return day
         try:
-            return self.terms.day(self.good.add(day.date, self.contract.settlement.count))
+            return self.terms.day(self.paying.add(day.date, self.contract.settlement.count))
         except NotCovered as beyond:
-            self._fault(self.contract.calendar.place, f"the payment of {day}: {beyond}")
+            self._fault((self.contract.payment_calendar or self.contract.calendar).place,
+                        f"the payment of {day}: {beyond}")
+            return day
+
+    def _rolled_payment(self, day: Day, pay: Pay) -> Day:
+        """A payment day that a term gives, good in the payment calendar."""
+        try:
+            return self.terms.day(self.paying.rolled(day.date))
+        except NotCovered as beyond:
+            self._fault(self.contract.terms[pay.due].place, str(beyond))
             return day
 
 
@@ -248,4 +295,4 @@ def _only(dated: DatedContract, live: frozenset[str]) -> DatedContract:
 
 def _years(start: Day, day: Day) -> float:
     """Years between two dates, Actual/365 (Fixed)."""
-    return YEAR_FRACTIONS["Actual/365 (Fixed)"](start.date, day.date)
+    return actual_365_fixed(start.date, day.date)

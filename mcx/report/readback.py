@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
-from mcx.checked.contract import Figures
+from mcx.checked.contract import BusinessDays, Figures
 from mcx.checked.formula import Number
 from mcx.checked.market import Market
 from mcx.checked.payoff import Assign, Continuous, Pay, Running
@@ -77,9 +77,18 @@ def _facts(dated: DatedContract) -> Iterator[Sentence]:
     elif contract.textbook:
         yield Sentence("settlement", "paid on the spot")
     if contract.calendar is not None:
-        listed = "weekends only" if contract.calendar.holidays == "none" else contract.calendar.holidays
         version = f" ({dated.calendar_version})" if dated.calendar_version else ""
-        yield Sentence("calendar", f"{listed}, {contract.calendar.roll}{version}")
+        yield Sentence("calendar", _calendar(contract.calendar) + version)
+        yield Sentence("payment calendar", _calendar(contract.payment_calendar) if contract.payment_calendar else
+                       "payments go by the same calendar")
+
+
+def _calendar(stated: BusinessDays) -> str:
+    """Which days are good, and how others roll."""
+    listed = "weekends only" if stated.holidays == ("none",) else joined(stated.holidays)
+    both = f", open in {'any' if stated.in_any else 'all'} of them" if len(stated.holidays) > 1 else ""
+    extra = f", and closed on {joined([str(day) for day in stated.extra])}" if stated.extra else ""
+    return f"{listed}{both}{extra}, {stated.roll}"
 
 
 def _running(running: Running, dated: DatedContract, words: Words, settled: Settled) -> str:
