@@ -18,6 +18,7 @@ from mcx.machine.draws import fill_draws
 from mcx.machine.forward import forward
 from mcx.machine.jit import jit
 from mcx.machine.prepare import KernelCode
+from mcx.machine.rows import borrowed, wide_vectors
 from mcx.machine.sizes import GROUP, lanes_for
 
 _TASKS = 16  # pieces of a batch for each thread: a core that is busy with something else takes fewer
@@ -38,6 +39,7 @@ def sweep(code, scalars, outputs, normals, uniforms, seed, stream, numbers, path
     values     (paths, outputs), written; or (0, outputs)
     """
     lanes, width = words.shape[1], outputs.shape[0]
+    registers = borrowed(registers)
     tree = registers[registers.shape[0] - 1]
     for first in range(0, paths, lanes):
         fill_draws(registers, words, numbers[first : first + lanes], normals, uniforms, seed, stream)
@@ -64,6 +66,7 @@ def sweep(code, scalars, outputs, normals, uniforms, seed, stream, numbers, path
 def _tree_sum(tree, x, centre, squared, count):
     """The sum over the first `count` of 64 lanes of x - centre, or of its square, pair by pair, then pairs of
     pairs: the tree fixes the order of the additions and still fills vector registers."""
+    wide_vectors()
     for i in range(32):
         a, b = x[i] - centre, x[i + 32] - centre
         a, b = a * a if squared else a, b * b if squared else b

@@ -10,6 +10,7 @@ import numpy as np
 
 from mcx.machine.forms import Form
 from mcx.machine.jit import jit
+from mcx.machine.rows import borrowed, wide_vectors
 from mcx.machine.special import exp_row, log_row
 
 
@@ -30,6 +31,8 @@ def forward(registers, code, scalars, lanes):
 
 @jit
 def _arithmetic(form, y, registers, scalars, a, b, lanes):
+    wide_vectors()
+    registers, scalars = borrowed(registers), borrowed(scalars)
     if form == Form.FILL_S:
         s = scalars[a]
         for i in range(lanes):
@@ -106,6 +109,8 @@ def _arithmetic(form, y, registers, scalars, a, b, lanes):
 
 @jit
 def _logic(form, y, registers, scalars, a, b, c, lanes):
+    wide_vectors()
+    registers, scalars = borrowed(registers), borrowed(scalars)
     if form == Form.LT_RR:
         p, q = registers[a], registers[b]
         for i in range(lanes):
@@ -171,6 +176,8 @@ def _logic(form, y, registers, scalars, a, b, c, lanes):
 
 @jit
 def _model(form, y, registers, scalars, a, b, c, d, lanes):
+    wide_vectors()
+    registers, scalars = borrowed(registers), borrowed(scalars)
     if form == Form.STEP_RSR:
         x, s, z = registers[a], scalars[b], registers[c]
         for i in range(lanes):
