@@ -9,10 +9,16 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from datetime import timedelta
 
 from mcx.checked.contract import Contract
 from mcx.checked.market import Curve, Market
 
+YEARS = {
+    "Actual/360": lambda start, end: (end - start).days / 360,
+    "30/360": lambda start, end: (360 * (end.year - start.year) + 30 * (end.month - start.month) - min(start.day, 30)
+                                  + (30 if end.day == 31 and start.day >= 30 else end.day)) / 360,
+}  # the day counts of curves that examples use
 ROUNDING = 1e-12  # of a variance: what is left of it after the other assets is then no randomness of its own
 
 
@@ -52,7 +58,17 @@ class PlainMarket:
         """The integral of the forward rate to `time`."""
         if curve.form == "discount":
             return self.line(curve, time, lambda t, factor: -math.log(factor))
-        return self.line(curve, time, lambda t, rate: rate * t)
+        how = curve.convention
+
+        def years(t: float) -> float:
+            if how.since is None or how.day_count == "Actual/365 (Fixed)":
+                return t
+            return YEARS[how.day_count](how.since, how.since + timedelta(days=round(365 * t)))
+
+        held = {"continuous": lambda t, rate: rate * years(t),
+                "annual": lambda t, rate: years(t) * math.log(1 + rate),
+                "simple": lambda t, rate: math.log(1 + rate * years(t))}
+        return self.line(curve, time, held[how.compounding])
 
     def growth(self, asset: int, time: float) -> float:
         """log of forward over spot."""

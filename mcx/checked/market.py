@@ -29,16 +29,27 @@ class Node:
 
 
 @dataclass(frozen=True, slots=True)
+class RateConvention:
+    """How zero rates are meant: `compounding` is 'continuous', 'annual' or 'simple', the time counts from `since` (the
+    valuation date, None in textbook markets) by `day_count`."""
+
+    compounding: str = "continuous"
+    day_count: str = "Actual/365 (Fixed)"
+    since: datetime.date | None = None
+
+
+@dataclass(frozen=True, slots=True)
 class Curve:
     """Points in order of time; a flat number is a single node at time 0 with label ''.
 
-    `form`: 'zero' (continuously compounded zero rates, also funding spreads and yields), 'discount' (discount
-    factors), 'forward' (forwards of an asset) or 'vol' (Black vols).
+    `form`: 'zero' (zero rates, also funding spreads and yields), 'discount' (discount factors), 'forward' (forwards of
+    an asset) or 'vol' (Black vols). `convention` is about zero rates.
     """
 
     form: str
     nodes: tuple[Node, ...]
     place: Place
+    convention: RateConvention = RateConvention()
 
     @property
     def flat(self) -> bool:

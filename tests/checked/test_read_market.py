@@ -6,7 +6,7 @@ from datetime import date
 
 import pytest
 
-from mcx.checked.market import Market
+from mcx.checked.market import Market, RateConvention
 from mcx.checked.read_market import read_market
 from mcx.text.documents import parse_documents
 
@@ -82,6 +82,34 @@ def test_no_dates_in_textbook_markets(label: str):
                        "assets: {orchard: {spot: 100, yield: 0%, vol: 25%}}\n")
     assert faults == [f"m.yaml:2:15: expected a tenor in years or months, found '{label}'; a textbook market "
                       "has no dates"]
+
+
+def test_the_convention_of_rates():
+    """Zero rates may be quoted with annual or simple compounding and another day count; without a word they are
+    continuous and Actual/365 (Fixed)."""
+    market, faults = parsed(WHOLE.replace("{1m: 2.0%, 1y: 2.1%, 2029-12-01: 2.35%}",
+                                          "{zero_rates: {1m: 2.0%}, compounding: simple, day_count: Act/360}"))
+    assert faults == []
+    assert market.rates["EUR"].convention == RateConvention("simple", "Actual/360", date(2026, 12, 1))
+    assert parsed(WHOLE)[0].rates["EUR"].convention == RateConvention()
+
+
+@pytest.mark.parametrize(("written", "fault"), [
+    ("{zero_rates: 2%, compounding: simple}",
+     "4:21: expected simple rates by tenor or date, as '{3m: 2.0%}', found '2%'; a simple rate belongs to one tenor"),
+    ("{zero_rates: 2%, compounding: annual, day_count: 30/360}",
+     "4:21: expected rates by tenor or date with 30/360, found '2%'"),
+    ("{zero_rates: 2%}", "4:8: 'compounding' is missing in the curve"),
+    ("{zero_rates: 2%, compounding: monthly}",
+     "4:38: expected a compounding: 'continuous', 'annual' or 'simple', found 'monthly'"),
+    ("{zero_rates: {1y: 2%}, compounding: annual, day_count: Act/Act (ICMA)}",
+     "4:63: expected a day count of curves, found 'Act/Act (ICMA)'; Actual/Actual (ICMA) needs coupon periods"),
+    ("{zero_rates: {3y: -40%}, compounding: simple}",
+     "4:26: a simple rate as low as this to '3y' leaves no discount factor above 0"),
+])
+def test_conventions_that_do_not_fit(written: str, fault: str):
+    """Each has its fault at its place."""
+    assert faults_of("{1m: 2.0%, 1y: 2.1%, 2029-12-01: 2.35%}", written) == [f"m.yaml:{fault}"]
 
 
 SLIPS = [
