@@ -102,7 +102,12 @@ class BusinessDays:
 
 @dataclass(frozen=True, slots=True)
 class Contract:
-    """One trade. Exactly one of `notional` and `units` is given. `textbook` contracts use times, others dates."""
+    """One trade. Exactly one of `notional` and `units` is given. `textbook` contracts use times, others dates.
+
+    A contract at fault is handed on as far as it could be read, so that dates and market can be checked in the same
+    round: `at_fault` are the terms without a value that should have one, `framed` is whether assets, start, day count,
+    settlement and calendar are all sound.
+    """
 
     title: str
     currency: str
@@ -120,6 +125,8 @@ class Contract:
     textbook: bool = False
     text: str = ""
     assumptions: tuple[str, ...] = ()
+    at_fault: frozenset[str] = frozenset()
+    framed: bool = True
 
     @property
     def size(self) -> float:

@@ -27,7 +27,7 @@ from mcx.checked.reading import (
     text_of,
     value_of,
 )
-from mcx.checked.term_values import TermReader
+from mcx.checked.term_values import DATED_TYPES, TermReader
 from mcx.checked.values import amount, asset_name, currency_code
 from mcx.faults import Fault, did_you_mean
 from mcx.text.located import Document, Mapping, Node, Scalar, Sequence
@@ -46,34 +46,34 @@ ROLLS = ("following", "modified following", "preceding")
 def read_contract(
     document: Document, definitions: MappingOf[str, Document]
 ) -> tuple[Contract | None, list[Fault]]:
-    """The contract that a document says, None if anything is wrong with it; `definitions` gives payoffs by
-    name."""
+    """The contract that a document says as far as it could be read (see `Contract`), None where its payoff could
+    not; and what is wrong. `definitions` gives payoffs by name."""
     body, faults = document.body, []
-    check_keys(body, KEYS, REQUIRED, faults, "the contract", LATER)
     size = _size(body, faults)
-    assets = asset_names(body.get("assets"), faults)
-    payoff = _payoff(body, definitions, assets, faults)
-    start = read(body, "start", _start, faults)
-    settlement = read(body, "settlement", _settlement, faults)
-    day_count = read(body, "day_count", day_count_name, faults)
-    calendar, payment_calendar = (_calendar(body, key, faults) for key in ("calendar", "payment_calendar"))
-    terms = mapping_of(body.get("terms"), faults, "terms and their values")
-    values, textbook = {}, False
-    if payoff:
-        reader = TermReader(payoff, assets, faults)
-        values = reader.read(terms, body.place)
-        textbook = _is_textbook(reader.written)
-        _check_times(reader.written, textbook, values, faults)
-        _check_calendar_keys(body, textbook, payoff, faults)
     title, currency = text_of(body, "contract", faults), read(body, "currency", currency_code, faults)
-    if faults or payoff is None:
-        return None, faults
+    frame: list[Fault] = []
+    assets = asset_names(body.get("assets"), frame)
+    start = read(body, "start", _start, frame)
+    settlement = read(body, "settlement", _settlement, frame)
+    day_count = read(body, "day_count", day_count_name, frame)
+    calendar, payment_calendar = (_calendar(body, key, frame) for key in ("calendar", "payment_calendar"))
+    payoff = _payoff(body, definitions, assets, faults)
+    terms = mapping_of(body.get("terms"), faults, "terms and their values")
+    if payoff is None:
+        check_keys(body, KEYS, REQUIRED, faults, "the contract", LATER)
+        return None, faults + frame
+    reader = TermReader(payoff, assets, faults)
+    values = reader.read(terms, body.place)
+    textbook = _is_textbook(reader.written)
+    _check_times(reader.written, textbook, values, faults)
+    _check_keys(body, _is_dated(body, textbook, reader), payoff, frame)
     return Contract(
-        title=title, currency=currency, assets=assets, payoff=_begun(payoff, values), terms=values,
+        title=title, currency=currency or "", assets=assets, payoff=_begun(payoff, values), terms=values,
         place=body.get("contract").place, notional=size.get("notional"), units=size.get("units"), start=start,
-        day_count=day_count or "", settlement=settlement, calendar=calendar, payment_calendar=payment_calendar, textbook=textbook,
-        text=document.text,
-    ), []
+        day_count=day_count or "", settlement=settlement, calendar=calendar, payment_calendar=payment_calendar,
+        textbook=textbook, text=document.text, at_fault=reader.at_fault,
+        framed=not frame and (textbook or (start and settlement and calendar) is not None),
+    ), faults + frame
 
 
 def asset_names(node: Node | None, faults: list[Fault]) -> tuple[str, ...]:
@@ -99,7 +99,7 @@ def _size(body: Mapping, faults: list[Fault]) -> dict[str, float]:
     two = "'notional' (payments are multiples of it) or 'units' (payments are money per unit)"
     if len(stated) == 2:
         faults.append(Fault(body.key("units").place, f"a contract has {two}, not both"))
-    elif not stated:
+    elif not stated and not _is_meant(body, "notional", "units"):
         faults.append(Fault(body.place, f"{two} is missing in the contract"))
     return {key: read(body, key, amount, faults) for key in stated}
 
@@ -203,21 +203,32 @@ def _unfit_rule(rule: DayRule, textbook: bool) -> str:
     return ""
 
 
-def _check_calendar_keys(body: Mapping, textbook: bool, payoff: Payoff, faults: list[Fault]) -> None:
-    """Start, settlement and calendar stand in calendar contracts, and in no other; the day count where it
-    is used."""
-    if textbook:
+def _is_dated(body: Mapping, textbook: bool, reader: TermReader) -> bool:
+    """Whether the keys of a contract with calendar dates are asked for: not where the terms say times, nor where they
+    say nothing that can be read and none of these keys is there."""
+    if reader.written or any(key in body for key in CALENDAR_KEYS):
+        return not textbook
+    return not any(term.type in DATED_TYPES and term.name in reader.at_fault for term in reader.payoff.terms)
+
+
+def _check_keys(body: Mapping, dated: bool, payoff: Payoff, faults: list[Fault]) -> None:
+    """The keys of the contract: start, settlement and calendar stand in calendar contracts, and in no other; the day
+    count where it is used."""
+    check_keys(body, KEYS, (*REQUIRED, *(("start", "settlement", "calendar") if dated else ())), faults, "the contract",
+               LATER)
+    if not dated:
         for key in CALENDAR_KEYS:
             if key in body:
                 text = f"'{key}' belongs to contracts with calendar dates; this one uses times"
                 faults.append(Fault(body.key(key).place, text))
-        return
-    for key in ("start", "settlement", "calendar"):
-        if key not in body:
-            faults.append(Fault(body.place, f"'{key}' is missing in the contract"))
-    if "day_count" not in body and _uses_period(payoff):
+    elif "day_count" not in body and _uses_period(payoff) and not _is_meant(body, "day_count"):
         text = f"'day_count' is missing in the contract: '{payoff.name}' pays by 'period'"
         faults.append(Fault(body.place, text))
+
+
+def _is_meant(body: Mapping, *keys: str) -> bool:
+    """Whether a key of the contract that is not known is near one of these."""
+    return any(did_you_mean(key, keys) for key in body.keys() if key not in KEYS)
 
 
 def _uses_period(payoff: Payoff) -> bool:

@@ -33,19 +33,23 @@ class TermReader:
         self.payoff, self.assets, self.faults = payoff, assets, faults
         self.nodes: dict[str, Node] = {}  # of the terms stated, and the defaults
         self.written: list[DayRef] = []  # dates and times written out, not those named
+        self.at_fault: frozenset[str] = frozenset()  # terms without a value that have, or may have, one
 
     def read(self, mapping: Mapping | None, place: Place) -> dict[str, TermValue]:
         """The values by name: those stated, and defaults. Optional terms that are not stated are absent."""
         terms = self.payoff.terms
         mapping = mapping or Mapping((), place)
         needed = [term.name for term in terms if not term.optional and term.default is None]
-        check_keys(mapping, [term.name for term in terms], needed, self.faults,
-                   f"the terms of '{self.payoff.name}'")
+        known = [term.name for term in terms]
+        check_keys(mapping, known, needed, self.faults, f"the terms of '{self.payoff.name}'")
         defaults = {term.name: term.default for term in terms if term.default is not None}
         self.nodes = defaults | {name.text: node for name, node in mapping.entries}
         stated = [term for term in terms if term.name in self.nodes]
         values = {term.name: self.value(term, self.nodes[term.name]) for term in stated}
-        return {name: value for name, value in values.items() if value is not None}
+        found = {name: value for name, value in values.items() if value is not None}
+        meant = {*needed, *values} if set(mapping.keys()) <= set(known) else set(known)  # what was misspelt may be any
+        self.at_fault = frozenset(meant - set(found))
+        return found
 
     def value(self, term: Term, node: Node) -> TermValue | None:
         """The value of one term; None and a fault where it is wrong."""

@@ -12,8 +12,8 @@ import math
 from dataclasses import replace
 
 from mcx.checked.contract import Contract, DayList, DayRef, Figures, Stretch
-from mcx.checked.payoff import At, Continuous, Event, Pay, Running
-from mcx.checked.term_values import DATED_TYPES
+from mcx.checked.payoff import At, Continuous, Event, Pay, Payoff, Running
+from mcx.checked.term_values import DATED_TYPES, NUMERIC
 from mcx.dates.business_days import NotCovered, good_days
 from mcx.dates.dated_contract import Day, DatedContract, DatedEvent, Moment, Occasion, Update, Watch
 from mcx.dates.day_counts import ICMA, actual_365_fixed, year_fraction
@@ -30,21 +30,24 @@ def date_contract(
     """The contract with every date known, and the faults that only dates can show.
 
     Times are years from `valuation`; without one, from the contract's start. Optional date terms that are not
-    stated narrow nothing, and nothing happens at them.
+    stated narrow nothing, and nothing happens at them. A contract at fault gives no dated one, but the faults of the
+    dates that can be read in it.
     """
     good, faults = good_days(contract.calendar) if contract.calendar else (None, [])
     paying, more = good_days(contract.payment_calendar) if contract.payment_calendar else (good, [])
-    if faults or more:
-        return None, faults + more
+    faults += more
+    if faults or not (contract.framed or contract.textbook):
+        return None, faults
     base = None if contract.textbook else valuation or contract.start.date
     terms = TermDays(contract, base, good, paying, _payment_terms(contract.payoff))
-    schedules = {term.name: terms.of_term(term.name) for term in contract.payoff.terms
-                 if term.type in DATED_TYPES and term.name in contract.terms}
-    faults = terms.faults + _wrong_lengths(contract, schedules)
-    if faults:
-        return None, faults
+    dated_terms = [term.name for term in contract.payoff.terms if term.type in DATED_TYPES]
+    found = {name: terms.of_term(name) for name in dated_terms if name in contract.terms}
+    schedules = {name: days for name, days in found.items() if days}
+    unread = frozenset(name for name in dated_terms if name in contract.at_fault or found.get(name) == ())
     start = Day(0.0) if contract.textbook else terms.day(contract.start.date)
-    return _Dating(contract, valuation, schedules, start, terms).dated()
+    dated, faults = _Dating(contract, valuation, schedules, unread, start, terms).dated()
+    faults += terms.faults + _wrong_lengths(contract, schedules)
+    return (None if faults or contract.at_fault or not contract.framed else dated), sorted(set(faults))
 
 
 def _payment_terms(payoff: Payoff) -> frozenset[str]:
@@ -66,7 +69,7 @@ def _wrong_lengths(contract: Contract, schedules: dict[str, tuple[Day, ...]]) ->
         if isinstance(value, Figures) and value.per_date:
             count, what = len(value.rows), "numbers"
         elif term.type == "dates" and term.per in contract.terms and value is not None:
-            count, what = len(schedules[term.name]), "dates"
+            count, what = len(schedules.get(term.name, ())), "dates"
         else:
             continue
         if schedule and count and count != len(schedule):
@@ -90,9 +93,9 @@ class _Dating:
     """One contract on its way to a dated one; collects faults as it goes."""
 
     def __init__(self, contract: Contract, valuation: datetime.date | None,
-                 schedules: dict[str, tuple[Day, ...]], start: Day, terms: TermDays):
+                 schedules: dict[str, tuple[Day, ...]], unread: frozenset[str], start: Day, terms: TermDays):
         self.contract, self.payoff, self.valuation = contract, contract.payoff, valuation
-        self.schedules, self.start, self.terms = schedules, start, terms
+        self.schedules, self.unread, self.start, self.terms = schedules, unread, start, terms
         self.good, self.paying = terms.observing, terms.paying
         self.positions = _positions(contract, schedules)
         self.faults: list[Fault] = []
@@ -100,6 +103,8 @@ class _Dating:
         self.updates: dict[Day, list[Update]] = {}
         self.events: dict[Day, list[DatedEvent]] = {}
         self.watches: list[Watch] = []
+        self.past: dict[str, set[int]] = {}  # positions in the schedule of each term
+        self.unwatched = False  # whether a watch is at fault, so that its running value has no date
 
     def dated(self) -> tuple[DatedContract | None, list[Fault]]:
         self._refuse_dates_before_start()
@@ -108,10 +113,11 @@ class _Dating:
         for event in self.payoff.events:
             self._happen(event)
         days = sorted({*self.updates, *self.events}, key=lambda day: day.time)
+        self._refuse_past()
+        if not self._can_be_read():
+            return None, self.faults
         if not days and not self.faults:
             self._fault(self.contract.place, "nothing is ever observed or paid: no event has a date")
-        if self.faults:
-            return None, self.faults
         dated = DatedContract(
             contract=self.contract, valuation=self.valuation, start=self.start, schedules=self.schedules,
             moments=tuple(Moment(day, tuple(self.updates.get(day, ())), tuple(self.events.get(day, ())))
@@ -119,7 +125,14 @@ class _Dating:
             watches=tuple(self.watches), calendar_version=self._calendar_version(),
             assumptions=(*self.contract.assumptions, *dict.fromkeys(self.assumptions)))
         live, faults = readings(dated)
+        faults += self.faults
         return (None if faults else _only(dated, live)), faults
+
+    def _can_be_read(self) -> bool:
+        """Whether all that decides which formulas are read is known: every term but numbers that must be stated."""
+        at_fault = [term for term in self.payoff.terms if term.name in self.contract.at_fault | self.unread]
+        numbers = all(term.type in NUMERIC and not term.optional for term in at_fault)
+        return self.contract.framed and not self.unwatched and numbers
 
     def _fault(self, place: Place, text: str) -> None:
         fault = Fault(place, text)
@@ -136,18 +149,28 @@ class _Dating:
     def _refuse_dates_before_start(self) -> None:
         for name, days in self.schedules.items():
             if days[0].time < self.start.time:
-                self._fault(self.contract.terms[name].place,
-                            f"{days[0]} lies before the contract's start {self.start}")
+                self._fault(self._place(name, 0), f"{days[0]} lies before the contract's start {self.start}")
 
-    def _is_past(self, day: Day, name: str, what: str) -> bool:
-        """Whether a day is before the valuation date; then that is a fault of the term that gave it."""
-        if self.valuation is None or day.time >= 0:
-            return False
-        if day.time >= self.start.time:  # else that is the fault already
-            self._fault(self.contract.terms[name].place,
-                        f"{what}{day} lies before the valuation date {self.valuation}; a seasoned trade "
-                        "needs fixings, which a later version reads")
-        return True
+    def _place(self, name: str, position: int) -> Place:
+        """Where a date of a term is written: in its place of a list, else the term's value."""
+        value = self.contract.terms[name]
+        if isinstance(value, Stretch):
+            return (value.start, value.end)[position].place
+        return value.days[position].place if isinstance(value, DayList) and len(value.days) > 1 else value.place
+
+    def _is_past(self, day: Day) -> bool:
+        """Whether a day is before the valuation date; one before the start is at fault already."""
+        return self.valuation is not None and self.start.time <= day.time < 0
+
+    def _refuse_past(self) -> None:
+        """Days before the valuation date on which something happens: one fault for each term that gives them."""
+        for name, positions in self.past.items():
+            days = [self.schedules[name][k] for k in sorted(positions)]
+            few = f"{days[0]} lies" if len(days) == 1 else f"{len(days)} dates, {days[0]} to {days[-1]}, lie"
+            what = "the start of the watch " if isinstance(self.contract.terms[name], Stretch) else ""
+            self._fault(self._place(name, min(positions)),
+                        f"{what}{few} before the valuation date {self.valuation}; a seasoned trade needs fixings, "
+                        "which a later version reads")
 
     def _observe(self, running: Running) -> None:
         """The days of a running value: updates on dates, or a continuous watch."""
@@ -159,10 +182,13 @@ class _Dating:
             return
         value = self.contract.terms.get(at.name)
         if isinstance(value, Stretch):
+            if at.name in self.unread:
+                return
             if running.how not in WATCHABLE:
                 text = (f"'{running.name}' is the {running.how} of what it observes and cannot be watched "
                         f"continuously; {', '.join(WATCHABLE)} can")
                 self._fault(value.place, text)
+                self.unwatched = True
             else:
                 self._watch(running, *self.schedules[at.name], at.name, value.place)
             return
@@ -175,7 +201,10 @@ class _Dating:
             return
         if end.time <= start.time:
             self._fault(place, f"the watch ends on {end}, not after its start on {start}")
-        elif not self._is_past(start, name, "the start of the watch "):
+            self.unwatched = True
+        else:
+            if self._is_past(start):
+                self.past.setdefault(name, set()).add(self.schedules[name].index(start))
             self.watches.append(Watch(running, start, end))
 
     def _end(self, at: At) -> Day | None:
@@ -188,7 +217,7 @@ class _Dating:
             self._fault(event.at.place, "'once' needs the moment of a hit, which a later version reads")
             return
         occasions = self._occasions(event.at, event.since, event.until)
-        if not occasions and event.at.name in self.schedules:
+        if not occasions and event.at.name in self.schedules and not {event.since, event.until} & self.unread:
             dates = f"'{event.at.name}.{event.at.part}'" if event.at.part else f"'{event.at.name}'"
             dates += f" from '{event.since}'" if event.since else ""
             dates += f" until '{event.until}'" if event.until else ""
@@ -201,14 +230,18 @@ class _Dating:
     def _occasions(self, at: At, since: str = "", until: str = "") -> list[Occasion]:
         """The dates of a schedule, or the part of them that is meant, numbered as in the whole schedule."""
         days = self.schedules.get(at.name, ())
+        if {at.name, since, until} & self.unread:
+            return []
         single = isinstance(self.contract.terms.get(at.name), DayRef)
         first = self.schedules[since][0].time if since in self.schedules else -math.inf
         last = self.schedules[until][0].time if until in self.schedules else math.inf
         found: list[Occasion] = []
         for k in part_of(range(len(days)), at.part):
             day = days[k]
-            if not first <= day.time <= last or self._is_past(day, at.name, ""):
+            if not first <= day.time <= last:
                 continue
+            if self._is_past(day):
+                self.past.setdefault(at.name, set()).add(k)
             found.append(Occasion(
                 day=day, schedule="" if single else at.name, nth=k + 1, n_dates=len(days),
                 period=self._fraction(at.name, days[k - 1] if k else self.start, day, k, k == len(days) - 1),
@@ -243,6 +276,8 @@ class _Dating:
         day = occasion.day
         if pay.due == "same day":
             return day
+        if pay.due in self.unread:
+            return day
         if pay.due not in self.schedules:
             return self._after_lag(day)
         term = self.payoff.term(pay.due)
@@ -251,14 +286,13 @@ class _Dating:
             self._fault(pay.place, f"'{pay.due}' has one date for each date of '{term.per}', and {day} is "
                                    "none of them")
             return day
+        if position >= len(self.schedules[pay.due]):  # a list that is too short is the fault already
+            return day
         due = self.schedules[pay.due][position]
         if self.paying is not None:
             due = self._rolled_payment(due, pay)
         if due.time < day.time:
-            value = self.contract.terms[pay.due]
-            listed = isinstance(value, DayList) and len(value.days) > 1
-            place = value.days[position].place if listed else value.place
-            self._fault(place, f"the payment of what is observed on {day} falls due before, on {due}")
+            self._fault(self._place(pay.due, position), f"the payment of what is observed on {day} falls due before, on {due}")
         return due
 
     def _after_lag(self, day: Day) -> Day:

@@ -210,7 +210,8 @@ class _Walk:
     def _term(self, name: str, place: Place) -> float | None:
         stated = self.contract.terms.get(name)
         if stated is None:
-            self._not_stated(name, place)
+            if name not in self.contract.at_fault:
+                self._not_stated(name, place)
             return None
         self.owner.terms.add(name)
         if isinstance(stated, Word):

@@ -80,7 +80,7 @@ def parsed(text: str, definition: str = DEFINITION) -> tuple[Contract | None, li
     (document,), wrong = parse_documents(text.encode(), "c.yaml")
     assert faults + wrong == []
     contract, faults = read_contract(document, Definitions(own))
-    assert (contract is None) == bool(faults)
+    assert contract is not None or faults
     return contract, [str(fault) for fault in sorted(faults)]
 
 
@@ -313,6 +313,33 @@ def test_all_faults_at_once():
                                                                                              "side: x")
     assert [fault.split(": ")[0] for fault in parsed(text)[1]] == [
         "c.yaml:2:11", "c.yaml:11:39", "c.yaml:14:19", "c.yaml:18:9"]
+
+
+def test_a_misspelt_key_is_not_missing_as_well():
+    """One slip, one fault: what was misspelt is known to be meant."""
+    for old, new in (("start", "strat"), ("settlement", "setlement"), ("calendar", "calender"),
+                     ("notional", "notionl"), ("day_count", "daycount")):
+        (fault,) = faults_of(f"\n{old}:", f"\n{new}:")
+        assert fault.endswith(f"'{new}' is not a key of the contract; did you mean '{old}'?")
+
+
+def test_terms_without_any_date_that_can_be_read():
+    """Where no date can be read and no key tells, it is not known that the contract goes by the calendar."""
+    text = TEXTBOOK.replace("{count: 4, until: 1y}", "{count: 4, until: 1yr}").replace("0.5y", "half a year")
+    assert [fault.split(": ")[0] for fault in parsed(text.replace("watched: dates", "watched: 1 y"))[1]] == [
+        "c.yaml:8:28", "c.yaml:11:15", "c.yaml:12:12"]
+
+
+def test_what_could_be_read_of_a_contract_at_fault():
+    """The dates of a contract stay readable beside a fault elsewhere; it says which terms have no value."""
+    contract, faults = parsed(WHOLE.replace("side: call", "side: caal"))
+    assert len(faults) == 1
+    assert contract.at_fault == {"side"} and contract.framed
+    contract, _ = parsed(WHOLE.replace("side: call", "syde: call"))
+    assert contract.at_fault == {"side", "cap"}  # the misspelt term may have been either
+    contract, _ = parsed(WHOLE.replace("start: 2026-11-16", "start: soon"))
+    assert contract.at_fault == frozenset() and not contract.framed
+    assert parsed(WHOLE)[0].framed
 
 
 def test_faults_of_the_definition_are_told_too():

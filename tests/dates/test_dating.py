@@ -325,6 +325,64 @@ def test_lists_for_each_date_have_its_length():
                       "'paid_on' has 2 dates; 'observations' has 4 dates, 2027-02-16 to 2027-11-16"]
 
 
+def places(text: str, valuation: date = TODAY) -> list[str]:
+    """The places of all faults of a contract and its dates."""
+    documents, faults = parse_documents(text.encode(), "n.yaml")
+    asked, faults = checked_request(documents, faults)
+    (contract,) = asked.contracts
+    found, wrong = date_contract(contract, valuation)
+    assert found is None
+    return [f"{fault.place.line}:{fault.place.column}" for fault in sorted({*faults, *wrong})]
+
+
+SEASONED = f"""\
+{HEAD}  barrier: {{type: percent, per: observations}}
+  early: {{type: dates}}
+  late: {{type: date}}
+events:
+  - at: observations
+    if: spot > barrier
+    then: [pay: 1]
+  - at: early
+    until: late
+    pay: 1
+---
+{CONTRACT}  barrier: 50%
+  early: [2026-11-20, 2026-11-23, 2027-01-08]
+  late: 2027-02-01
+"""
+
+
+@pytest.mark.parametrize(("old", "new", "place"), [
+    ("barrier: 50%", "barrier: [50%, 40%]", "26:12"),  # a list that does not fit
+    ("barrier: 50%", "barrier: 50", "26:12"),  # a term that cannot be read
+    ("until: 2027-11-16", "until: 2027-11-20", "25:43"),  # a rule that does not end where it says
+    ("currency: EUR", "currency: euro", "16:11"),
+    ("\n  barrier: 50%", "", "25:3"),
+])
+def test_dates_are_judged_beside_other_faults(old: str, new: str, place: str):
+    """Dates before the valuation date are told in the same round as what is wrong elsewhere in the contract."""
+    assert SEASONED.count(old) == 1
+    early = "27:11" if new else "26:11"
+    assert sorted(places(SEASONED.replace(old, new))) == sorted([place, early])
+
+
+def test_dates_that_hang_on_what_cannot_be_read_are_not_judged():
+    """Which dates are meant is not known while the term that narrows them is at fault."""
+    assert places(SEASONED.replace("late: 2027-02-01", "late: soon")) == ["28:9"]
+    assert places(SEASONED.replace("until: late", "from: late").replace("late: 2027-02-01", "late: x")) == ["28:9"]
+
+
+def test_past_dates_are_told_once_for_each_term():
+    """However many dates of a term have passed, they are one fault, at the first of them."""
+    contract = CONTRACT.replace("{from: 2027-02-16, until: 2027-11-16, every: 3 months}",
+                                "{from: 2026-11-16, until: 2027-11-16, every: 1 business day}")
+    assert dated(contract=contract)[1] == [
+        "11 dates, 2026-11-16 to 2026-11-30, lie before the valuation date 2026-12-01; a seasoned trade needs "
+        "fixings, which a later version reads"]
+    assert places(SEASONED) == ["27:11"]
+
+
 def test_list_read_on_another_day():
     """A list for each date of a schedule cannot be read on a day that is none of them; one number can."""
     terms = "  barrier: {type: percent, per: observations}\n  final: {type: date}\n"
