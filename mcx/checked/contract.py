@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import datetime
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import TypeAlias
 
 from mcx.checked.payoff import Payoff
@@ -123,6 +123,7 @@ class Contract:
     calendar: BusinessDays | None = None
     payment_calendar: BusinessDays | None = None  # None: payments go by `calendar`
     textbook: bool = False
+    conversion: dict[str, str] = field(default_factory=dict)  # 'quanto' or 'composite', by asset
     text: str = ""
     assumptions: tuple[str, ...] = ()
     at_fault: frozenset[str] = frozenset()

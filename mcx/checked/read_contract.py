@@ -12,6 +12,7 @@ from collections.abc import Mapping as MappingOf
 from dataclasses import replace
 
 from mcx.checked.contract import BusinessDays, Contract, DayRef, DayRule, Period, TermValue
+from mcx.checked.conversions import read_conversion
 from mcx.checked.day_count_names import day_count_name
 from mcx.checked.formula import Formula, Name, walk
 from mcx.checked.payoff import Assign, Pay, Payoff
@@ -34,10 +35,10 @@ from mcx.text.located import Document, Mapping, Node, Scalar, Sequence
 from mcx.text.scalars import date, expected, period, shortened, word
 
 KEYS = ("contract", "currency", "notional", "units", "assets", "start", "day_count", "settlement", "calendar",
-        "payment_calendar", "payoff", "terms")
+        "payment_calendar", "conversion", "payoff", "terms")
 REQUIRED = ("contract", "currency", "assets", "payoff", "terms")
 CALENDAR_KEYS = ("start", "day_count", "settlement", "calendar", "payment_calendar")  # not for textbook contracts
-LATER = ("happened", "fixings", "dividends", "quanto", "adjustments", "rounding", "disruption")
+LATER = ("happened", "fixings", "adjustments", "rounding", "disruption")
 LONGEST_LAG = 250  # business days, a year
 OPEN = ("in all", "in any")
 ROLLS = ("following", "modified following", "preceding")
@@ -57,6 +58,7 @@ def read_contract(
     settlement = read(body, "settlement", _settlement, frame)
     day_count = read(body, "day_count", day_count_name, frame)
     calendar, payment_calendar = (_calendar(body, key, frame) for key in ("calendar", "payment_calendar"))
+    conversion = read_conversion(body.get("conversion"), assets, faults)
     payoff = _payoff(body, definitions, assets, faults)
     terms = mapping_of(body.get("terms"), faults, "terms and their values")
     if payoff is None:
@@ -71,7 +73,7 @@ def read_contract(
         title=title, currency=currency or "", assets=assets, payoff=_begun(payoff, values), terms=values,
         place=body.get("contract").place, notional=size.get("notional"), units=size.get("units"), start=start,
         day_count=day_count or "", settlement=settlement, calendar=calendar, payment_calendar=payment_calendar,
-        textbook=textbook, text=document.text, at_fault=reader.at_fault,
+        textbook=textbook, conversion=conversion, text=document.text, at_fault=reader.at_fault,
         framed=not frame and (textbook or (start and settlement and calendar) is not None),
     ), faults + frame
 

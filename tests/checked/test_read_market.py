@@ -179,11 +179,54 @@ SLIPS = [
     # later versions
     ("source: closing prices", "fixings: {}",
      "2:1: 'fixings' is a key of a later version and is refused rather than ignored"),
-    ("yield: 2.4%, ", "dividends: [], ",
-     "8:42: 'dividends' is a key of a later version and is refused rather than ignored"),
-    ("yield: 2.4%, ", "yield: 2.4%, quanto: {}, ",
-     "8:55: 'quanto' is a key of a later version and is refused rather than ignored"),
+    # what the level gives up
+    ("yield: 2.4%, ", "dividends: [], ", "8:53: expected dividends by ex date, as '[{ex: 2027-05-03, cash: 4.0}, {ex: "
+                                         "2028-05-02, share: 1.5%}]', found a list; there is none; write 'yield: 0%'"),
+    ("yield: 2.4%, ", "dividends: [{ex: 2027-05-03}], ", "8:54: the dividend has neither 'cash' nor 'share'"),
+    ("yield: 2.4%, ", "dividends: [{ex: 2027-05-03, cash: 4%}], ",
+     "8:77: expected an amount of money, found '4%'; write it without a unit"),
+    ("yield: 2.4%, ", "dividends: [{ex: 2027-05-03, share: 100%}], ",
+     "8:78: expected a share above 0% and below 100%, found '100%'"),
+    ("yield: 2.4%, ", "dividends: [{ex: 2027-05-03, cash: 4}, {ex: 2027-05-03, share: 1%}], ",
+     "8:86: a second dividend on 2027-05-03; one may have both cash and share"),
+    ("forwards: {", "dividends: [{ex: 2027-05-03, cash: 4}], forwards: {",
+     "9:104: the asset 'lantern' has both 'dividends' and 'forwards'; keep one"),
+    ("yield: 2.4%, ", "underlying: total return, yield: 2.4%, ",
+     "8:68: 'yield' counts twice: the asset 'harbour' is a total-return index, whose level keeps its dividends"),
+    ("yield: 2.4%, ", "decrement: 5%, ",
+     "8:42: a decrement is taken from a total-return index; write 'underlying: total return' as well"),
+    ("yield: 2.4%, ", "underlying: total return, decrement: 50, ",
+     "8:79: expected a decrement a year, as '5%' or '50 points', found '50'"),
+    ("yield: 2.4%, ", "yield: 2.4%, dividend_blend: {cash_until: 1y, share_from: 3y}, ",
+     "8:55: a blend is for cash dividends, and the asset 'harbour' has none"),
+    ("yield: 2.4%, ", "dividends: [{ex: 2027-05-03, cash: 4}], dividend_blend: {cash_until: 3y, share_from: 3y}, ",
+     "8:127: expected a date or tenor after 'cash_until', found '3y'"),
+    # rates of exchange
+    ("yield: 2.4%, ", "yield: 2.4%, quanto: {fx_vol: 9%, fx_correlation: -20%}, ",
+     "8:63: 'fx' is missing in the quanto"),
+    ("yield: 2.4%, ", "yield: 2.4%, quanto: {fx_vol: 9%, fx_correlation: -20%, fx: GBP per USD}, ",
+     "8:102: expected a rate of exchange with EUR, the asset's currency, found 'GBP per USD'"),
+    ("source: closing prices", "fx: {EUR/USD: {spot: 1.1, vol: 8%}}",
+     "2:6: expected a rate of exchange as 'EUR per USD': units of the first for one of the second, found 'EUR/USD'"),
 ]
+
+
+def test_what_a_level_gives_up():
+    """Dividends stand in order of time with those of the past; a decrement is a share or points a year; a rate of
+    exchange keeps its direction."""
+    market, faults = parsed(WHOLE.replace("yield: 2.4%, ", "dividends: [{ex: 2028-05-02, share: 1.5%}, {ex: 2026-12-01, "
+                                          "cash: 4, share: 1%}], dividend_blend: {cash_until: 2026-06-01, share_from: 3y}, ")
+                            .replace("forwards: {1y: 805, 2028-12-01: 810}", "underlying: total return, decrement: 50 points")
+                            + "fx: {EUR per USD: {spot: 0.9, vol: 8%}}\n")
+    assert faults == []
+    harbour, lantern = market.assets["harbour"], market.assets["lantern"]
+    assert [(one.time, one.label) for one in harbour.dividends] == [(0.0, "2026-12-01"), (518 / 365, "2028-05-02")]
+    assert (harbour.dividends[0].cash.value, harbour.dividends[0].share.value) == (4, 0.01)
+    assert harbour.dividends[1].cash is None
+    assert (harbour.blend.cash_until, harbour.blend.share_from) == (-183 / 365, 1096 / 365)
+    assert (lantern.total_return, lantern.decrement.points, lantern.decrement.quoted.value) == (True, True, 50)
+    assert market.fx_between("USD", "EUR").per == ("EUR", "USD")
+    assert market.fx_between("GBP", "EUR") is None
 
 
 @pytest.mark.parametrize(("old", "new", "expected"), SLIPS, ids=[f"{new}" for _, new, _ in SLIPS])
