@@ -8,49 +8,109 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable
+from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 
 from mcx.checked.contract import Contract
-from mcx.checked.market import Market
+from mcx.checked.conversions import simulated_rates
+from mcx.checked.market import AssetMarket, Market
+from mcx.faults import Fault
 from mcx.leaves.correlation import correlation_matrix, lower_factor
-from mcx.leaves.curves import LogCurve, log_curve
+from mcx.leaves.curves import log_curve
+from mcx.leaves.dividends import Escrow, Payouts, payouts
 from mcx.leaves.vols import VolCurve, covariance_integral, vol_curve
 from mcx.tape.formulas import figure
 from mcx.tape.program import Leaf, LeafKind
+from mcx.tape.steps import Makeup
+
+MONTHLY, WEEKLY = 12, 52
+SOON = 1e-6  # years: before any node
+
+@dataclass(frozen=True, slots=True)
+class Exchange:
+    """How an asset of another currency meets the rate of exchange (units of the contract's currency for one of its own):
+    the rate's vol, its correlation with the asset, and its number among what is simulated, None where it is fixed."""
+
+    vol: VolCurve
+    correlation: float
+    number: int | None = None
 
 
 class MarketMap:
-    """What a market says about the assets and the currency of one contract. Both are checked already."""
+    """What a market says about the assets and the currency of one contract. Both are checked already.
 
-    def __init__(self, market: Market, contract: Contract):
-        self.contract = contract
-        self._quotes = [market.assets[name] for name in contract.assets]
-        self._spots = [asset.spot.value for asset in self._quotes]
+    `last` is the time of the contract's last observation, which cash dividends need: `DatedContract.last`. Beside the
+    assets, numbered in the contract's order, the rates of exchange of composite assets are simulated; they have the
+    numbers after them.
+    """
+
+    def __init__(self, market: Market, contract: Contract, last: float | None = None):
+        self.market, self.contract, self.last = market, contract, last
+        self.quotes: list[AssetMarket] = [market.assets[name] for name in contract.assets]
+        self.rates_of_exchange = [market.fx[name] for name in
+                                  simulated_rates(contract.conversion, contract.currency, market)]
         self._rates = log_curve(market.rates[contract.currency])
         self._funding = log_curve(market.funding.get(contract.currency))
-        self._vols: list[VolCurve] = [vol_curve(asset.vol) for asset in self._quotes]
-        self._correlation = correlation_matrix(market.correlation, contract.assets)
-        self._own_rates: list[LogCurve] = []
-        self._yields: list[LogCurve] = []
-        self._forwards: list[LogCurve | None] = []
-        for asset in self._quotes:
-            self._own_rates.append(log_curve(market.rates[asset.currency or contract.currency]))
-            self._yields.append(log_curve(asset.dividend_yield))
-            self._forwards.append(log_curve(asset.forwards, asset.spot.value) if asset.forwards else None)
-        drifts = [market.rates[asset.currency or contract.currency] for asset in self._quotes]
-        drifts += [asset.dividend_yield for asset in self._quotes] + [asset.forwards for asset in self._quotes]
-        drifts += [asset.vol for asset in self._quotes]
-        self._nodes = sorted({node.time for curve in drifts if curve for node in curve.nodes if node.time > 0.0})
+        self._vols: list[VolCurve] = [vol_curve(each.vol) for each in (*self.quotes, *self.rates_of_exchange)]
+        names = (*contract.assets, *(each.name for each in self.rates_of_exchange))
+        signs = [1.0] * len(self.quotes) + [self._sign(each.per) for each in self.rates_of_exchange]
+        self._correlation = correlation_matrix(market.correlation, names) * np.outer(signs, signs)
+        self._exchanges = [self._exchange(number, asset) for number, asset in enumerate(self.quotes)]
+        self._own_rates = [log_curve(market.rates.get(asset.currency or contract.currency)) for asset in self.quotes]
+        self._yields = [log_curve(asset.dividend_yield) for asset in self.quotes]
+        self._forwards = [log_curve(asset.forwards, asset.spot.value) if asset.forwards else None for asset in self.quotes]
+        self._payouts = [self._paid_out(number) for number in range(len(self.quotes))]
+        self._escrows = [Escrow.of(paid, partial(self._own_growth, number)) for number, paid in enumerate(self._payouts)]
+        self._stripped = [asset.spot.value - escrow.after(0.0)
+                          for asset, escrow in zip(self.quotes, self._escrows, strict=True)]
+
+    def faults(self) -> list[Fault]:
+        """Cash dividends that are worth as much as the spot or more."""
+        return [Fault(asset.place, f"the cash dividends of '{asset.name}' up to the contract's last observation are worth "
+                                   f"{asset.spot.value - left:.6g} today; its spot is {asset.spot.value:.6g}")
+                for asset, left in zip(self.quotes, self._stripped, strict=True) if not left > 0.0]
 
     def nodes(self) -> tuple[float, ...]:
-        """The times at which a drift or a vol of one of the contract's assets changes, in years."""
-        return tuple(self._nodes)
+        """The times at which a drift or a vol of what is simulated changes, in years; where cash dividends are still to
+        come also steps between them, because an extreme takes them at their mean over a step."""
+        market, own = self.market, self.contract.currency
+        curves = [market.rates.get(asset.currency or own) for asset in self.quotes]
+        curves += [curve for asset in self.quotes for curve in (asset.dividend_yield, asset.forwards, asset.vol)]
+        curves += [asset.quanto.fx_vol for asset, meets in zip(self.quotes, self._exchanges, strict=True)
+                   if meets and meets.number is None]
+        curves += [each.vol for each in self.rates_of_exchange]
+        curves += [market.rates[own]] if self.rates_of_exchange else []
+        times = {node.time for curve in curves if curve for node in curve.nodes}
+        for asset, paid in zip(self.quotes, self._payouts, strict=True):
+            times |= set(paid.share_times)
+            if paid.cash_times:
+                often = WEEKLY if asset.decrement else MONTHLY
+                times |= {step / often for step in range(1, math.ceil(paid.cash_times[-1] * often))}
+                times |= set() if asset.decrement else set(paid.cash_times)
+        return tuple(sorted(time for time in times if time > 0.0))
+
+    def makeup(self) -> Makeup:
+        """How the tape makes levels of what is simulated."""
+        return Makeup(
+            cash=frozenset(number for number, paid in enumerate(self._payouts) if paid.cash_times),
+            ex=frozenset((number, when) for number, paid in enumerate(self._payouts) for when in paid.share_times),
+            rates={number: meets.number for number, meets in enumerate(self._exchanges)
+                   if meets and meets.number is not None})
 
     def forward(self, asset: str, time: float) -> float:
-        """The forward of an asset; the spot at time 0."""
-        number = self.contract.assets.index(asset)
-        return self._spots[number] * math.exp(self._growth(number, time))
+        """The forward of an asset in the contract's currency, at a fixed rate of exchange (quanto) or at that of the day
+        (composite); the spot at time 0."""
+        return self._forward(self.contract.assets.index(asset), time)
+
+    def escrowed(self, asset: int, time: float) -> float:
+        """What the cash dividends still to come after a time are worth then, in the asset's currency."""
+        return self._escrows[asset].after(time) * math.exp(self._own_growth(asset, time))
+
+    def stripped(self, asset: int) -> float:
+        """The spot without the cash dividends to come: what the vol is about."""
+        return self._stripped[asset]
 
     def discount(self, time: float) -> float:
         """The discount factor of the contract's currency, without funding."""
@@ -61,8 +121,14 @@ class MarketMap:
         return math.exp(self._rates.log(time) + self._funding.log(time))
 
     def vol_to(self, asset: str, time: float) -> float:
-        """The Black vol of an asset to a time."""
-        return self._vols[self.contract.assets.index(asset)].vol_to(time)
+        """The Black vol of an asset to a time: of its level without cash dividends to come, in the contract's currency
+        if it is converted at the rate of the day."""
+        number = self.contract.assets.index(asset)
+        meets = self._exchanges[number]
+        if meets is None or meets.number is None:
+            return self._vols[number].vol_to(time)
+        time = time or SOON
+        return math.sqrt(self._variance(number, meets.number, 0.0, time) / time)
 
     def correlation(self, first: str, second: str) -> float:
         """The correlation of two assets of the contract."""
@@ -76,32 +142,98 @@ class MarketMap:
         return np.array([factors[leaf] if leaf in factors else self._value(leaf) for leaf in leaves], dtype=np.float64)
 
     def _value(self, leaf: Leaf) -> float:
+        asset, start, end = leaf.asset, leaf.start, leaf.end
         match leaf.kind:
             case LeafKind.LOG_SPOT:
-                return math.log(self._spots[leaf.asset])
+                return math.log(self._stripped[asset] if asset < len(self.quotes) else self._fx_spot(asset))
             case LeafKind.FORWARD:
-                return self._spots[leaf.asset] * math.exp(self._growth(leaf.asset, leaf.end))
+                return self._forward(asset, end)
             case LeafKind.VARIANCE:
-                return self._variance(leaf)
+                return self._variance(asset, leaf.other, start, end)
             case LeafKind.DRIFT:
-                growth = self._growth(leaf.asset, leaf.end) - self._growth(leaf.asset, leaf.start)
-                return growth - 0.5 * self._variance(leaf)
+                growth = self._growth if asset < len(self.quotes) else self._fx_growth
+                return growth(asset, end) - growth(asset, start) - 0.5 * self._variance(asset, -1, start, end)
+            case LeafKind.JUMP:
+                return self._payouts[asset].shares_at(end)
+            case LeafKind.ESCROW:
+                return self.escrowed(asset, end)
+            case LeafKind.MEAN_ESCROW:
+                before = self._own_growth(asset, end) - self._payouts[asset].shares_at(end)
+                closing = self._escrows[asset].at_or_after(end) * math.exp(before)
+                return 0.5 * (self.escrowed(asset, start) + closing)
             case LeafKind.DISCOUNT:
-                return self.funded_discount(leaf.end)
+                return self.funded_discount(end)
             case LeafKind.TERM:
                 return figure(self.contract, leaf)
         raise ValueError(f"no leaf of the market: {leaf.kind}")
 
-    def _growth(self, asset: int, time: float) -> float:
-        """The log of the forward over the spot."""
-        given = self._forwards[asset]
+    def _exchange(self, number: int, asset: AssetMarket) -> Exchange | None:
+        how = self.contract.conversion.get(asset.name)
+        if how == "quanto":
+            correlation = self._sign(asset.quanto.per) * asset.quanto.fx_correlation.value
+            return Exchange(vol_curve(asset.quanto.fx_vol), correlation)
+        if how == "composite":
+            rate = self.market.fx_between(asset.currency, self.contract.currency)
+            row = len(self.quotes) + self.rates_of_exchange.index(rate)
+            return Exchange(self._vols[row], float(self._correlation[number, row]), row)
+        return None
+
+    def _sign(self, per: tuple[str, str]) -> float:
+        """-1 where a rate of exchange is quoted the other way round than in the contract's currency: its log turns."""
+        return 1.0 if per[0] == self.contract.currency else -1.0
+
+    def _paid_out(self, number: int) -> Payouts:
+        asset = self.quotes[number]
+        in_cash = any(each.cash and each.time > 0.0 for each in asset.dividends) or (
+            asset.decrement is not None and asset.decrement.points)
+        assert self.last is not None or not in_cash, "cash dividends need the time of the last observation"
+        return payouts(asset, partial(self._base_growth, number), math.inf if self.last is None else self.last)
+
+    def _forward(self, number: int, time: float) -> float:
+        meets = self._exchanges[number]
+        composite = meets is not None and meets.number is not None
+        growth = self._own_growth if composite else self._growth
+        level = self._stripped[number] * math.exp(growth(number, time)) + self.escrowed(number, time)
+        level = level if time > 0.0 else self.quotes[number].spot.value  # to the last digit
+        return level * self._fx_spot(meets.number) * math.exp(self._fx_growth(meets.number, time)) if composite else level
+
+    def _fx_spot(self, number: int) -> float:
+        rate = self.rates_of_exchange[number - len(self.quotes)]
+        return rate.spot.value ** self._sign(rate.per)
+
+    def _fx_growth(self, number: int, time: float) -> float:
+        """The log of the forward over the spot of a rate of exchange: by the difference of the two currencies' rates."""
+        one, other = self.rates_of_exchange[number - len(self.quotes)].per
+        foreign = other if one == self.contract.currency else one
+        return log_curve(self.market.rates[foreign]).log(time) - self._rates.log(time)
+
+    def _base_growth(self, asset: int, time: float) -> float:
+        """The log of the forward over the spot before dividends, in the asset's own currency."""
+        given, decrement = self._forwards[asset], self.quotes[asset].decrement
         if given is not None:
             return given.log(time)
-        return self._yields[asset].log(time) - self._own_rates[asset].log(time)
+        taken = decrement.quoted.value * time if decrement and not decrement.points else 0.0
+        return self._yields[asset].log(time) - self._own_rates[asset].log(time) - taken
 
-    def _variance(self, leaf: Leaf) -> float:
-        vol = self._vols[leaf.asset]
-        return covariance_integral(vol, vol, leaf.start, leaf.end)
+    def _own_growth(self, asset: int, time: float) -> float:
+        """The same with dividends that are shares."""
+        return self._base_growth(asset, time) + self._payouts[asset].shares_to(time)
+
+    def _growth(self, asset: int, time: float) -> float:
+        """The same under the measure of the contract's currency: less the covariance with the rate of exchange."""
+        meets = self._exchanges[asset]
+        if meets is None:
+            return self._own_growth(asset, time)
+        together = covariance_integral(self._vols[asset], meets.vol, 0.0, time) * meets.correlation
+        return self._own_growth(asset, time) - together
+
+    def _variance(self, asset: int, other: int, start: float, end: float) -> float:
+        """The variance of a log over a step, or that of the sum of two of them."""
+        own = covariance_integral(self._vols[asset], self._vols[asset], start, end)
+        if other < 0:
+            return own
+        return float(own + 2.0 * self.step_covariance([asset, other], start, end)[0, 1]
+                     + covariance_integral(self._vols[other], self._vols[other], start, end))
 
     def _factors(self, leaves: Iterable[Leaf]) -> dict[Leaf, float]:
         """All FACTOR leaves, one factorisation for each step and the assets that move in it."""
@@ -118,8 +250,8 @@ class MarketMap:
         return found
 
     def step_covariance(self, assets: list[int], start: float, end: float) -> np.ndarray:
-        """The covariance of the assets' logs over a step, shape (assets, assets): correlation times the integral of
-        the product of their vols."""
+        """The covariance of the logs over a step, shape (assets, assets), rates of exchange by their numbers:
+        correlation times the integral of the product of their vols."""
         covariance = np.empty((len(assets), len(assets)))
         for i, first in enumerate(assets):
             for j, second in enumerate(assets[: i + 1]):

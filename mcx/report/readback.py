@@ -33,6 +33,8 @@ HOW = {"average": "the average of {}", "total": "the sum of {}", "product": "the
        "lowest": "the lowest {}", "highest": "the highest {}", "latest": "the latest {}",
        "ever": "whether ever {}", "always": "whether always {}"}
 LAWS = {"exact": "the level between two dates is a Brownian bridge in its log, whose extreme has a known law",
+        "nearly exact": "the same law for the level without its cash dividends to come, which enter at their mean over "
+                        "each step between two dates",
         "unread": "nothing depends on it"}
 
 
@@ -40,8 +42,8 @@ def readback(dated: DatedContract, market: Market | None, path: PathResult | Non
     """Everything that the contract says; with a market also what the market says on its dates."""
     contract = dated.contract
     words, settled = Words(dated), Settled(contract)
-    market_map = MarketMap(market, contract) if market else None
-    unrolled = unroll(dated, nodes=market_map.nodes() if market_map else ())
+    market_map = MarketMap(market, contract, dated.last.time) if market else None
+    unrolled = unroll(dated, nodes=market_map.nodes(), makeup=market_map.makeup()) if market_map else unroll(dated, nodes=())
     return Readback(
         contract=contract.title,
         payoff=contract.payoff.name,

@@ -21,8 +21,11 @@ class LeafKind(Enum):
     LOG_SPOT = "log of the spot"  # asset
     DRIFT = "drift of the log over a step"  # asset, start, end
     FACTOR = "covariance factor of a step"  # asset, other (the asset whose normal it multiplies), start, end
-    VARIANCE = "variance of the log over a step"  # asset, start, end
+    VARIANCE = "variance of the log over a step"  # asset, start, end; other (-1: none): of the sum of both logs
     FORWARD = "forward of an asset"  # asset, end
+    JUMP = "log of what a dividend leaves"  # asset, end: its ex date
+    ESCROW = "cash dividends still to come"  # asset, end
+    MEAN_ESCROW = "mean of the cash dividends to come over a step"  # asset, start, end
     DISCOUNT = "funded discount factor"  # end: when the amount is paid
     TERM = "a numeric term of the contract"  # name, asset (-1: one for all), index (-1: one for all dates)
 
