@@ -5,6 +5,7 @@
 
 from __future__ import annotations
 
+import gc
 import json
 import os
 import sys
@@ -39,8 +40,41 @@ def sampling(command: Callable) -> Callable:
     return command
 
 
-@click.group(context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
-@click.version_option(package_name="mcx", message="%(version)s")
+class ReaderGone(Exception):
+    """Whoever read standard output has gone away."""
+
+
+class Commands(click.Group):
+    """Commands whose reader may go away, which is nobody's fault: click would answer 1, and that means 'no' here."""
+
+    def parse_args(self, ctx: click.Context, args: list[str]) -> list[str]:
+        with _reader():
+            return super().parse_args(ctx, args)
+
+    def invoke(self, ctx: click.Context) -> object:
+        with _reader():
+            return super().invoke(ctx)
+
+
+@contextmanager
+def _reader() -> Iterator[None]:
+    try:
+        yield
+    except BrokenPipeError:
+        raise ReaderGone from None
+
+
+def _show_version(context: click.Context, _: click.Parameter, wanted: bool) -> None:
+    if wanted and not context.resilient_parsing:
+        from mcx import __version__
+
+        click.echo(__version__)
+        context.exit()
+
+
+@click.group(cls=Commands, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
+@click.option("--version", is_flag=True, is_eager=True, expose_value=False, callback=_show_version,
+              help="Show the version and exit.")
 def cli() -> None:
     """Independent values, with their errors, for structured notes and exotic options declared in YAML.
 
@@ -117,6 +151,7 @@ def main(arguments: list[str] | None = None) -> None:
     """The door: runs a command and ends the process with its exit code."""
     from mcx.faults import InputError, Refusal, RequestError
 
+    gc.set_threshold(1_000_000)  # what imports make stays: looking for garbage in it takes a tenth of a start
     for stream in (sys.stdout, sys.stderr):
         if hasattr(stream, "reconfigure"):
             stream.reconfigure(errors="replace")  # a terminal without '±' is no reason to fail
@@ -133,7 +168,7 @@ def main(arguments: list[str] | None = None) -> None:
     except (KeyboardInterrupt, click.Abort):
         _complain("interrupted before there was an estimate")
         sys.exit(INTERRUPTED)
-    except BrokenPipeError:  # the reader has read what it wanted
+    except ReaderGone:  # it has read what it wanted
         _stop_writing()
         sys.exit(0)
     except OSError as trouble:  # every file that is read has its own sentence by now

@@ -84,6 +84,13 @@ class Word:
 TermValue: TypeAlias = DayRef | DayRule | DayList | Stretch | Figures | Word
 
 
+def place_of(value: TermValue, position: int) -> Place:
+    """Where one of a term's dates is written: in its place of a list, at an end of a stretch, else the whole value."""
+    if isinstance(value, Stretch):
+        return (value.start, value.end)[position].place
+    return value.days[position].place if isinstance(value, DayList) and len(value.days) > 1 else value.place
+
+
 @dataclass(frozen=True, slots=True)
 class BusinessDays:
     """Which days are good and how others roll ('following', 'modified following', 'preceding').
@@ -106,7 +113,7 @@ class Contract:
 
     A contract at fault is handed on as far as it could be read, so that dates and market can be checked in the same
     round: `at_fault` are the terms without a value that should have one, `framed` is whether assets, start, day count,
-    settlement and calendar are all sound.
+    settlement and calendar are all sound. Where its definition is at fault, `payoff` holds no more than the terms.
     """
 
     title: str
@@ -114,7 +121,7 @@ class Contract:
     assets: tuple[str, ...]
     payoff: Payoff
     terms: dict[str, TermValue]  # optional terms that were not stated are absent; defaults are filled in
-    place: Place
+    place: Place  # of the title
     notional: float | None = None
     units: float | None = None
     start: DayRef | None = None
@@ -128,6 +135,7 @@ class Contract:
     assumptions: tuple[str, ...] = ()
     at_fault: frozenset[str] = frozenset()
     framed: bool = True
+    terms_place: Place | None = None  # where a term that is missing would stand
 
     @property
     def size(self) -> float:

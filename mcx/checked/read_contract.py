@@ -17,6 +17,7 @@ from mcx.checked.day_count_names import day_count_name
 from mcx.checked.formula import Formula, Name, walk
 from mcx.checked.payoff import Assign, Pay, Payoff
 from mcx.checked.read_payoff import read_payoff
+from mcx.checked.read_terms import read_terms
 from mcx.checked.reading import (
     check_keys,
     items_of,
@@ -47,8 +48,8 @@ ROLLS = ("following", "modified following", "preceding")
 def read_contract(
     document: Document, definitions: MappingOf[str, Document]
 ) -> tuple[Contract | None, list[Fault]]:
-    """The contract that a document says as far as it could be read (see `Contract`), None where its payoff could
-    not; and what is wrong. `definitions` gives payoffs by name."""
+    """The contract that a document says as far as it could be read (see `Contract`), None where it is not known which
+    terms its payoff has; and what is wrong. `definitions` gives payoffs by name."""
     body, faults = document.body, []
     size = _size(body, faults)
     title, currency = text_of(body, "contract", faults), read(body, "currency", currency_code, faults)
@@ -73,7 +74,8 @@ def read_contract(
         title=title, currency=currency or "", assets=assets, payoff=_begun(payoff, values), terms=values,
         place=body.get("contract").place, notional=size.get("notional"), units=size.get("units"), start=start,
         day_count=day_count or "", settlement=settlement, calendar=calendar, payment_calendar=payment_calendar,
-        textbook=textbook, conversion=conversion, text=document.text, at_fault=reader.at_fault,
+        textbook=textbook, conversion=conversion, text=document.text, terms_place=(terms or body).place,
+        at_fault=reader.at_fault,
         framed=not frame and (textbook or (start and settlement and calendar) is not None),
     ), faults + frame
 
@@ -109,7 +111,7 @@ def _size(body: Mapping, faults: list[Fault]) -> dict[str, float]:
 def _payoff(
     body: Mapping, definitions: MappingOf[str, Document], assets: tuple[str, ...], faults: list[Fault]
 ) -> Payoff | None:
-    """The definition that the contract names, checked for its assets."""
+    """The definition that the contract names, checked for its assets; without events where it is at fault."""
     name = read(body, "payoff", word, faults)
     if name is None:
         return None
@@ -119,7 +121,9 @@ def _payoff(
         return None
     payoff, wrong = read_payoff(definitions[name], assets=len(assets) or None, asset_names=assets)
     faults += wrong
-    if payoff and assets:
+    if payoff is None:
+        return _terms_alone(definitions[name])
+    if assets:
         fewest, most = payoff.assets
         if len(assets) < fewest or (most is not None and len(assets) > most):
             wanted = f"{fewest} or more" if most is None else f"{fewest}"
@@ -127,6 +131,14 @@ def _payoff(
             faults.append(Fault(body.get("assets").place, text))
             return None
     return payoff
+
+
+def _terms_alone(definition: Document) -> Payoff | None:
+    """The terms of a definition that is at fault elsewhere, so that their values can be read all the same."""
+    said: list[Fault] = []
+    terms = read_terms(definition.body.get("terms"), said)
+    name = definition.body.get("payoff")
+    return None if said else Payoff(name.text, "", terms, (), (), (), name.place)
 
 
 def _start(node: Node) -> DayRef | Fault:

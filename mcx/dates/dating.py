@@ -11,7 +11,7 @@ import datetime
 import math
 from dataclasses import replace
 
-from mcx.checked.contract import Contract, DayList, DayRef, Figures, Stretch
+from mcx.checked.contract import Contract, DayRef, Figures, Stretch, place_of
 from mcx.checked.payoff import At, Continuous, Event, Pay, Payoff, Running
 from mcx.checked.term_values import DATED_TYPES, NUMERIC
 from mcx.dates.business_days import NotCovered, good_days
@@ -47,7 +47,7 @@ def date_contract(
     start = Day(0.0) if contract.textbook else terms.day(contract.start.date)
     dated, faults = _Dating(contract, valuation, schedules, unread, start, terms).dated()
     faults += terms.faults + _wrong_lengths(contract, schedules)
-    return (None if faults or contract.at_fault or not contract.framed else dated), sorted(set(faults))
+    return (None if faults or contract.at_fault else dated), sorted(set(faults))
 
 
 def _payment_terms(payoff: Payoff) -> frozenset[str]:
@@ -132,7 +132,7 @@ class _Dating:
         """Whether all that decides which formulas are read is known: every term but numbers that must be stated."""
         at_fault = [term for term in self.payoff.terms if term.name in self.contract.at_fault | self.unread]
         numbers = all(term.type in NUMERIC and not term.optional for term in at_fault)
-        return self.contract.framed and not self.unwatched and numbers
+        return self.contract.framed and bool(self.payoff.events) and not self.unwatched and numbers
 
     def _fault(self, place: Place, text: str) -> None:
         fault = Fault(place, text)
@@ -149,14 +149,8 @@ class _Dating:
     def _refuse_dates_before_start(self) -> None:
         for name, days in self.schedules.items():
             if days[0].time < self.start.time:
-                self._fault(self._place(name, 0), f"{days[0]} lies before the contract's start {self.start}")
-
-    def _place(self, name: str, position: int) -> Place:
-        """Where a date of a term is written: in its place of a list, else the term's value."""
-        value = self.contract.terms[name]
-        if isinstance(value, Stretch):
-            return (value.start, value.end)[position].place
-        return value.days[position].place if isinstance(value, DayList) and len(value.days) > 1 else value.place
+                self._fault(place_of(self.contract.terms[name], 0),
+                            f"{days[0]} lies before the contract's start {self.start}")
 
     def _is_past(self, day: Day) -> bool:
         """Whether a day is before the valuation date; one before the start is at fault already."""
@@ -168,7 +162,7 @@ class _Dating:
             days = [self.schedules[name][k] for k in sorted(positions)]
             few = f"{days[0]} lies" if len(days) == 1 else f"{len(days)} dates, {days[0]} to {days[-1]}, lie"
             what = "the start of the watch " if isinstance(self.contract.terms[name], Stretch) else ""
-            self._fault(self._place(name, min(positions)),
+            self._fault(place_of(self.contract.terms[name], min(positions)),
                         f"{what}{few} before the valuation date {self.valuation}; a seasoned trade needs fixings, "
                         "which a later version reads")
 
@@ -292,7 +286,8 @@ class _Dating:
         if self.paying is not None:
             due = self._rolled_payment(due, pay)
         if due.time < day.time:
-            self._fault(self._place(pay.due, position), f"the payment of what is observed on {day} falls due before, on {due}")
+            self._fault(place_of(self.contract.terms[pay.due], position),
+                        f"the payment of what is observed on {day} falls due before, on {due}")
         return due
 
     def _after_lag(self, day: Day) -> Day:

@@ -116,23 +116,25 @@ class Crew:
         """
         paths, outputs = len(numbers), len(self.code.outputs)
         groups, blocks = -(-paths // GROUP), -(-paths // self.lanes)
-        padded = np.concatenate([numbers, np.resize(numbers, blocks * self.lanes - paths)])
+        missing = blocks * self.lanes - paths
+        padded = np.concatenate([numbers, np.resize(numbers, missing)]) if missing else numbers
         means, squares = np.empty((groups, outputs)), np.empty((groups, outputs))
         bad = np.empty(groups, dtype=np.int64)
-        piece = -(-blocks // (self.threads * _TASKS if self._pool else 1)) * self.lanes
+        pieces = min(blocks, self.threads * _TASKS) if self._pool else 1
+        bounds = [blocks * piece // pieces * self.lanes for piece in range(pieces + 1)]
 
-        def work(first: int) -> None:
-            last = min(first + piece, paths)
+        def work(piece: int) -> None:
+            first, end = bounds[piece : piece + 2]
+            last = min(end, paths)
             these = slice(first // GROUP, -(-last // GROUP))
             written = np.empty((0, outputs)) if values is None else values[first:last]
             room = self._rooms.pop()
             sweep(self.code.code, self.code.scalars, self.code.outputs, *self._draws,
-                  padded[first : first + piece], last - first, *room,
+                  padded[first:end], last - first, *room,
                   means[these], squares[these], bad[these], written)  # fmt: skip
             self._rooms.append(room)
 
-        firsts = range(0, paths, piece)
-        for _ in self._pool.map(work, firsts) if self._pool else map(work, firsts):
+        for _ in self._pool.map(work, range(pieces)) if self._pool else map(work, range(pieces)):
             pass
         return means, squares, bad
 

@@ -53,5 +53,6 @@ def batch_for(code: KernelCode, lanes: int) -> int:
 
 
 def lanes_for(rows: int) -> int:
-    """How many paths a block has: its register file stays in the second-level cache; a multiple of 64."""
-    return min(max(_CACHE // (8 * rows) // GROUP * GROUP, GROUP), 1024)
+    """How many paths a block has: its register file stays in the second-level cache; a multiple of 64. Below 128
+    the instructions themselves cost more than what a smaller file saves, however many rows there are."""
+    return min(max(_CACHE // (8 * rows) // GROUP * GROUP, 2 * GROUP), 1024)

@@ -26,6 +26,7 @@ from mcx.report.results import (
     WatchLine,
 )
 from mcx.report.settled import Settled, right_sides
+from mcx.report.underlyings import underlyings
 from mcx.report.wording import Words, days, figure, joined, period
 from mcx.tape.unroll import Unrolled, unroll
 
@@ -55,7 +56,7 @@ def readback(dated: DatedContract, market: Market | None, path: PathResult | Non
         events=tuple(event_line(event, dated, words, settled) for event in contract.payoff.events),
         watches=tuple(_watches(dated, settled, unrolled)),
         dates=tuple(_dates(dated, words, settled)),
-        assumptions=dated.assumptions,
+        assumptions=(*dated.assumptions, *(underlyings(dated, market_map) if market_map else ())),
         market=tuple(_market(dated, market_map)) if market_map else (),
         path=path,
     )

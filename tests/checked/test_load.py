@@ -87,6 +87,16 @@ def test_every_shipped_definition_has_an_example():
     assert used == set(shipped_names())
 
 
+def test_the_example_of_the_reference():
+    """What the grammar's reference shows as a definition of one's own is one, with a contract that has its dates."""
+    reference = (EXAMPLES[0].parents[1] / "README.md").read_text(encoding="utf-8")
+    example = reference.split("## 2. Write your own definition")[1].split("```yaml\n")[1].split("```")[0]
+    asked, faults = made(example, MARKET)
+    assert faults == []
+    dated, faults = date_contract(asked.contracts[0], asked.market.valuation)
+    assert faults == [] and len(dated.moments) == 4
+
+
 @pytest.mark.parametrize("name", shipped_names())
 def test_files_are_named_after_their_definitions(name: str):
     """A shipped definition is found by the name of its file."""
@@ -156,7 +166,8 @@ NO_PAYOFF = ("payoff: rainbow_option", "payoff: rainbow_opton",
              "a.yaml:8:9: there is no payoff 'rainbow_opton'; did you mean 'rainbow_option'?")
 WRONG_VOL = ("vol: 18%", "vol: 18", "b.yaml:5:57: expected a percentage with its unit, found '18'; write '18%'")
 WRONG_DATE = ("market: 2026-12-01", "market: 01.12.2026",
-              "b.yaml:1:9: expected the valuation date, or '0y' for textbook contracts, found '01.12.2026'")
+              "b.yaml:1:9: expected the valuation date, or '0y' for textbook contracts, found '01.12.2026'; "
+              "write '2026-12-01'")
 
 
 @pytest.mark.parametrize("alone", [WRONG_TERM, NO_PAYOFF, WRONG_VOL, WRONG_DATE], ids=lambda slip: slip[1].strip())

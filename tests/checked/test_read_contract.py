@@ -180,7 +180,7 @@ SLIPS = [
     ("[harbour, lantern]", "[harbour, lan/tern]",
      "4:19: expected the name of an asset, of letters, digits and . _ - &, found 'lan/tern'"),
     ("start: 2026-11-16", "start: 16.11.2026",
-     "5:8: expected a date such as '2026-11-16', found '16.11.2026'"),
+     "5:8: expected a date such as '2026-11-16', found '16.11.2026'; write '2026-11-16'"),
     ("start: 2026-11-16\n", "", "1:1: 'start' is missing in the contract"),
     ("day_count: 30/360\n", "", "1:1: 'day_count' is missing in the contract: 'sampler' pays by 'period'"),
     ("30/360", "30/365",
@@ -261,6 +261,16 @@ SLIPS = [
     ("{from: 2027-02-16, until", "{until", "12:10: 'from' is missing in the date rule"),
     ("{from: 2027-02-16, until: 2027-08-16, every: 3 months}", "{continuous: [2027-02-16, 2027-08-16]}",
      "12:11: 'dates' is a list of dates; only a watch term can be continuous"),
+    ("first_call: 2027-05-16", "first_call: 6.5.2027",
+     "16:15: expected a date such as '2026-11-16', a time such as '0.25y' or the name of another date term, "
+     "found '6.5.2027'; write '2027-05-06'"),
+    ("{continuous: [2026-12-01, dates.last]}", "continuously",
+     "17:12: expected dates, a rule of dates, the name of another date term, or '{continuous: [from, until]}', "
+     "found 'continuously'"),
+    ("[2027-02-18, 2027-05-19, 2027-08-18]", "quarterly",
+     "13:12: expected dates such as '[2026-11-16, 2027-05-17]', a rule such as '{from: 2026-11-16, until: 2027-11-16, "
+     "every: 3 months}', or the name of another date term, found 'quarterly'"),
+    ("812.40", "812,40", "11:22: expected a number, found '812,40'; write '812.40'"),
     ("[2026-12-01, dates.last]", "[2026-12-01]",
      "17:25: expected two dates, as in '{continuous: [from, until]}', found a list"),
     ("[2027-02-18, 2027-05-19, 2027-08-18]", "[]",
@@ -346,3 +356,19 @@ def test_faults_of_the_definition_are_told_too():
     """A contract on a definition at fault is refused with the definition's faults at their places."""
     _, faults = parsed(WHOLE, DEFINITION.replace("pay: period", "pay: perriod"))
     assert faults == ["d.yaml:22:14: there is no 'perriod' here; did you mean 'period'?"]
+
+
+def test_terms_are_read_beside_faults_of_the_definition():
+    """A definition that is at fault in its events still says which terms there are, and of which type."""
+    text = WHOLE.replace("[100%, 95%, 90%]", "70").replace("side: call", "syde: call")
+    contract, faults = parsed(text, DEFINITION.replace("pay: period", "pay: perriod"))
+    assert contract.payoff.events == ()
+    assert [fault.split(": ")[0] for fault in faults] == ["c.yaml:14:12", "c.yaml:18:3", "d.yaml:22:14"]
+    _, faults = parsed(text, DEFINITION.replace("{type: flag, default: false}", "{type: flg}"))
+    assert [fault.split(": ")[0] for fault in faults] == ["d.yaml:12:22"]  # the terms themselves are at fault
+
+
+def test_what_stands_there_already_is_not_offered():
+    """For a term that is not known, only those that are still blank are offered."""
+    assert faults_of("  watched: {", "  barrier_watched: {") == [
+        "c.yaml:17:3: 'barrier_watched' is not a key of the terms of 'sampler'; did you mean 'watched'?"]

@@ -8,7 +8,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from mcx.checked.formula import Binary, Name, Number
+from mcx.checked.formula import Binary, ChoiceIs, Formula, Name, Number, OfAsset, walk
 from mcx.checked.kinds import Kind
 from mcx.checked.payoff import Assign, At, Continuous, End, Pay, Payoff
 from mcx.checked.read_payoff import read_payoff
@@ -375,6 +375,44 @@ def test_every_definition_of_the_library_is_read(file):
     fewest, most = payoff.assets
     for assets in range(fewest, (most or 3) + 1):
         assert read_payoff(document, assets=assets, asset_names=tuple("abc"[:assets]))[1] == []
+
+
+def formulas_of(payoff: Payoff) -> list[Formula]:
+    """Every formula of a definition."""
+    found = [let.formula for let in payoff.lets]
+    found += [formula for one in payoff.running for formula in (one.formula, one.start)]
+    for event in payoff.events:
+        found.append(event.condition)
+        for action in (*event.then, *event.otherwise):
+            found += [action.amount] if isinstance(action, Pay) else []
+            found += [right for _, right in action.values] if isinstance(action, Assign) else []
+    return [formula for formula in found if formula is not None]
+
+
+def dates_of(payoff: Payoff) -> list[str]:
+    """Every date, dates and watch term that something of a definition goes by."""
+    found = [term.per for term in payoff.terms]
+    for one in payoff.running:
+        found += [one.at.name] if isinstance(one.at, At) else []
+        found += [one.at.start.name, one.at.end.name] if isinstance(one.at, Continuous) else []
+    for event in payoff.events:
+        found += [event.at.name, event.since, event.until]
+        found += [action.due for action in (*event.then, *event.otherwise) if isinstance(action, Pay)]
+    return found
+
+
+@pytest.mark.parametrize("file", LIBRARY, ids=lambda file: file.stem)
+def test_every_name_of_the_library_is_explained_and_used(file):
+    """Definitions say what each term is, have no default, and hold no name that nothing reads."""
+    (document,), _ = parse_documents(file.read_bytes(), file.name)
+    payoff, _ = read_payoff(document)
+    assert payoff.about
+    assert all(term.about and term.default is None for term in payoff.terms)
+    read = {part.name for formula in formulas_of(payoff) for part in walk(formula) if isinstance(part, Name)}
+    read |= {part.term for formula in formulas_of(payoff) for part in walk(formula) if isinstance(part, ChoiceIs)}
+    read |= {part.asset for formula in formulas_of(payoff) for part in walk(formula) if isinstance(part, OfAsset)}
+    names = {one.name for one in (*payoff.terms, *payoff.lets, *payoff.running)}
+    assert names - read - set(dates_of(payoff)) == set()
 
 
 TEXTS = [WHOLE, *(file.read_text(encoding="utf-8") for file in LIBRARY)]

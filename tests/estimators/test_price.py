@@ -86,7 +86,8 @@ def test_stages_are_shorter_runs():
     assert valuation.stages[-1] == valuation.price
 
 
-@pytest.mark.parametrize(("paths", "stages"), [(2, [2]), (64, [64]), (65, [64, 65]), (129, [64, 129]), (200, [64, 128, 200])])
+@pytest.mark.parametrize(("paths", "stages"), [
+    (2, [2]), (64, [64]), (65, [64, 65]), (129, [64, 129]), (200, [64, 128, 200])])
 def test_stages_of_short_runs(paths: int, stages: list[int]):
     """None twice, none of a single path."""
     valuation = value(autocall(), precision(paths, None, None), seed=SEED)
@@ -146,8 +147,8 @@ def test_interruption_gives_the_estimate_so_far(monkeypatch: pytest.MonkeyPatch)
 
 def test_an_exact_price_is_not_piloted():
     """A bond is the same on every path: the smallest planned run, no error, nothing drawn before."""
-    text = CALL.replace("payoff: european", "payoff: bond").replace("{side: call, strike: 100, expiry: 1y}", "{due: 1y}")
-    bond = "---\npayoff: bond\nabout: pays one\nterms:\n  due: {type: date}\nevents:\n  - at: due\n    pay: 1\n"
+    text = CALL.replace("european", "bond").replace("{side: call, strike: 100, expiry: 1y}", "{due: 1y}")
+    bond = "---\npayoff: bond\nabout: pays one\nterms: {due: {type: date}}\nevents:\n  - at: due\n    pay: 1\n"
     valuation = value(ready_of(request_of(text + bond + MARKET)), precision(None, "0.01", None), seed=SEED)
     assert (valuation.plan.paths, valuation.plan.pilot_paths) == (FEWEST_PLANNED, 0)
     assert valuation.price == Estimate(pytest.approx(0.960789439152323, rel=1e-14), 0.0, FEWEST_PLANNED)  # exp(-0.04)

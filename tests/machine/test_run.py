@@ -215,11 +215,11 @@ def test_compiling_is_announced_only_when_it_happens(monkeypatch: pytest.MonkeyP
 
 
 def test_register_file_of_a_block_stays_in_the_cache():
-    """Lanes are whole groups, between 64 and 1024, and their registers take at most 256 KB where that is possible."""
+    """Lanes are whole groups, between 128 and 1024, and their registers take at most 256 KB where that is possible."""
     for rows in (1, 10, 56, 200, 300, 5000):
         lanes = lanes_for(rows)
-        assert lanes % 64 == 0 and 64 <= lanes <= 1024
-        assert lanes == 64 or lanes * rows * 8 <= 1 << 18
+        assert lanes % 64 == 0 and 128 <= lanes <= 1024
+        assert lanes == 128 or lanes * rows * 8 <= 1 << 18
 
 
 def test_batches_are_whole_blocks_and_short():

@@ -20,10 +20,10 @@ OPTIONAL = re.compile(r"( *)# (\w+):\s*# optional;.*")
 HEAD = {"currency": "EUR", "notional": "1000000", "start": "2026-12-01", "day_count": "30/360",
         "settlement": "2 business days", "holidays": "ECB", "roll": "modified following", "market": "2026-12-01",
         "rates": "{EUR: {1y: 2%, 3y: 2.5%}}", "funding": "{EUR: 80 bp}", "spot": "100", "yield": "2%", "vol": "20%"}
-BY_TYPE = {"number": "1", "percent": "80%", "level": "100", "dates": "{from: 2027-03-01, until: 2028-12-01, every: 3 months}",
-           "watch": "2028-12-01", "flag": "true", "date": "2028-12-01"}
-BY_NAME = {"strike_date": "2027-06-01", "first_call": "2027-06-01", "receive": "alder", "give": "birch", "upper": "120%",
-           "cap": "150%", "bonus": "110%"}
+BY_TYPE = {"number": "1", "percent": "80%", "level": "100", "watch": "2028-12-01", "flag": "true", "date": "2028-12-01",
+           "dates": "{from: 2027-03-01, until: 2028-12-01, every: 3 months}"}
+BY_NAME = {"strike_date": "2027-06-01", "first_call": "2027-06-01", "receive": "alder", "give": "birch",
+           "upper": "120%", "cap": "150%", "bonus": "110%"}
 NO_STRIKE = {"strike_type": "floating"}  # for the other choice the optional strike is needed
 
 
@@ -111,7 +111,8 @@ def test_from_the_command_line():
     ("exchange_option", "alder", "'exchange_option' takes 2 assets, not 1"),
     ("basket_option", "alder", "'basket_option' takes 2 or more assets, not 1"),
     ("autocall", "alder,alder", "an asset is named twice"), ("autocall", "", "not ''"), ("autocall", "a,,b", "not ''"),
-    ("autocall", "a: b", "not 'a: b'"), ("europaen", "alder", "did you mean 'european'?"), ("zzz", "a", "'mcx payoffs' lists"),
+    ("autocall", "a: b", "not 'a: b'"), ("europaen", "alder", "did you mean 'european'?"),
+    ("zzz", "a", "'mcx payoffs' lists"),
 ])
 def test_what_does_not_fit(name: str, assets: str, said: str):
     """Each with its sentence."""

@@ -44,7 +44,8 @@ def test_everything_a_price_depends_on_is_in_it(recorded: Path):
     assert record["inputs"][0] == {"file": str(TWO), "text": TWO.read_text(encoding="utf-8"),
                                    "sha256": record["inputs"][0]["sha256"]}
     assert [Path(each["file"]).name for each in record["inputs"]] == ["autocall.yaml", "autocall.yaml"]
-    assert [(each["paths"], each["seed"], each["reduction"]) for each in record["request"]] == [(1000, SEED, "none")] * 2
+    asked = [(each["paths"], each["seed"], each["reduction"]) for each in record["request"]]
+    assert asked == [(1000, SEED, "none")] * 2
     assert {"python", "numpy", "numba", "llvmlite", "holidays", "source", "processor"} <= record["environment"].keys()
     assert all("holidays" in each["calendar_version"] for each in record["results"])
     table = package.price(TWO, paths=1000, seed=SEED).to_dict()
@@ -142,7 +143,7 @@ def test_any_edit_is_noticed(recorded: Path, tmp_path_factory: pytest.TempPathFa
     where = data.draw(st.integers(0, len(whole) - 1).filter(lambda at: whole[at:at + 1].strip()))
     byte = data.draw(st.integers(0, 255).filter(lambda new: new != whole[where]))
     edited = whole[:where] + bytes([byte]) + whole[where + 1:]
-    assume(b"e" not in whole[where:where + 1].lower() or bytes([byte]).lower() != b"e")  # 1e-05 and 1E-05 are one number
+    assume({whole[where], byte} != set(b"eE"))  # 1e-05 and 1E-05 are one number
     file = tmp_path_factory.getbasetemp() / "edited.json"
     file.write_bytes(edited)
     with pytest.raises(RequestError, match=r"edited\.json: "):
