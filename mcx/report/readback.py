@@ -33,6 +33,8 @@ from mcx.tape.unroll import Unrolled, unroll
 HOW = {"average": "the average of {}", "total": "the sum of {}", "product": "the product of {}",
        "lowest": "the lowest {}", "highest": "the highest {}", "latest": "the latest {}",
        "ever": "whether ever {}", "always": "whether always {}"}
+CONVERSIONS = {"quanto": "its level counts as quoted, at a fixed rate of exchange (quanto)",
+               "composite": "its level is converted at the rate of exchange of the same day (composite)"}
 LAWS = {"exact": "the level between two dates is a Brownian bridge in its log, whose extreme has a known law",
         "nearly exact": "the same law for the level without its cash dividends to come, which enter at their mean over "
                         "each step between two dates",
@@ -71,6 +73,8 @@ def _facts(dated: DatedContract) -> Iterator[Sentence]:
     else:
         yield Sentence("units", f"{figure(contract.units)}; amounts are {contract.currency} for each unit")
     yield Sentence("assets", joined(contract.assets))
+    if contract.conversion:
+        yield Sentence("conversion", "; ".join(f"{name}: {CONVERSIONS[how]}" for name, how in contract.conversion.items()))
     if contract.start is not None:
         yield Sentence("start", str(dated.start))
     if contract.day_count:
