@@ -7,6 +7,7 @@ piecewise constant vols and rates of the case.
 from __future__ import annotations
 
 from math import exp, expm1, inf, log, sqrt
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -16,6 +17,7 @@ from scipy.integrate import quad
 from scipy.special import ndtr
 
 from mcx.checked.market import Market
+import mcx
 from mcx.dates.dating import date_contract
 from mcx.estimators.price import prepare as ready_to_price
 from mcx.leaves.market_map import MarketMap
@@ -340,3 +342,12 @@ def test_funding_is_a_spread_curve_that_moves_no_forward():
     spread = (0.5 * 0.005 + 0.5 * (2 * 0.011 - 0.5 * 0.005) / 1.5)  # the log is linear between the points
     check(priced(text), exp(-spread) * black(100 * exp(0.03), 100, 0.04))
     assert MarketMap(*_asked(text)).forward("harbour", 1.0) == pytest.approx(100 * exp(0.03), rel=1e-14)
+
+
+def test_every_simulated_level_has_its_forward_for_mean():
+    """Of all kinds of underlying at once, with correlations between all: the martingale test of each."""
+    corner = Path(__file__).parent / "corners" / "underlyings.yaml"
+    everything, *watched = mcx.price(corner, paths=2**18, seed=SEED).prices
+    tests = [test for result in (everything, *watched) for test in result.checks.martingale]
+    assert len(everything.checks.martingale) == 6 and len(tests) == 11
+    assert all(abs(test.z) < 4 and test.standard_error < 3e-3 for test in tests)

@@ -59,6 +59,8 @@ class MarketMap:
         self._correlation = correlation_matrix(market.correlation, names) * np.outer(signs, signs)
         self._exchanges = [self._exchange(number, asset) for number, asset in enumerate(self.quotes)]
         self._own_rates = [log_curve(market.rates.get(asset.currency or contract.currency)) for asset in self.quotes]
+        self._foreign_rates = [log_curve(market.rates[each.per[each.per[0] == contract.currency]])
+                               for each in self.rates_of_exchange]
         self._yields = [log_curve(asset.dividend_yield) for asset in self.quotes]
         self._forwards = [log_curve(asset.forwards, asset.spot.value) if asset.forwards else None for asset in self.quotes]
         self._payouts = [self._paid_out(number) for number in range(len(self.quotes))]
@@ -203,9 +205,7 @@ class MarketMap:
 
     def _fx_growth(self, number: int, time: float) -> float:
         """The log of the forward over the spot of a rate of exchange: by the difference of the two currencies' rates."""
-        one, other = self.rates_of_exchange[number - len(self.quotes)].per
-        foreign = other if one == self.contract.currency else one
-        return log_curve(self.market.rates[foreign]).log(time) - self._rates.log(time)
+        return self._foreign_rates[number - len(self.quotes)].log(time) - self._rates.log(time)
 
     def _base_growth(self, asset: int, time: float) -> float:
         """The log of the forward over the spot before dividends, in the asset's own currency."""
