@@ -197,7 +197,7 @@ def _check_dividends(market: Market, dated: Iterable[DatedContract]) -> None:
     """Raises InputError where cash dividends are worth as much as the spot."""
     from mcx.leaves.market_map import MarketMap
 
-    faults = [fault for each in dated for fault in MarketMap(market, each.contract, each.last.time).faults()]
+    faults = [fault for each in dated for fault in MarketMap.of(market, each).faults()]
     if faults:
         raise InputError(faults)
 

@@ -252,7 +252,7 @@ class Reference:
 
     def __init__(self, dated: DatedContract, market: Market, grid: Sequence[float], assets: Sequence[int]):
         self.dated, self.grid, self.assets = dated, tuple(grid), tuple(assets)
-        self.market = PlainMarket(market, dated.contract, dated.last.time)
+        self.market = PlainMarket(market, dated.contract, max(grid, default=0.0))
         self.rates = [self.market.row_of_rate(number) for number in range(len(self.market.assets))]
         self.spots = tuple(asset.spot.value * (1.0 if rate is None else self.market.start(rate))
                            for asset, rate in zip(self.market.assets, self.rates, strict=True))

@@ -69,6 +69,29 @@ def test_dividends_after_the_last_observation_have_no_effect():
           black(stripped((0.25, 2), (0.75, 3), (1, 7)) * exp(RATE), 90, 0.04))
 
 
+def test_a_date_on_which_no_level_is_read_is_no_observation():
+    """A fixed amount paid later does not make later dividends count."""
+    text = """
+payoff: with_fixed_end
+about: A call, and a fixed amount long after it.
+terms: {expiry: {type: date}, later: {type: date}
+events:
+  - at: expiry
+    pay: max(spot - 100, 0)
+    as: call
+  - {at: later, pay: 1, as: fixed}
+---
+contract: fixed end
+currency: EUR
+units: 1
+assets: [harbour]
+payoff: with_fixed_end
+terms: {expiry: 1y, later: LATER
+""" + market(TWO.replace("cash: 3}]", "cash: 3}, {ex: 1.25y, cash: 7}]"))
+    near, far = (prepare(text.replace("LATER", later)).estimates(2**10, SEED)["leg: call"] for later in ("1y", "2y"))
+    assert near == far
+
+
 @pytest.mark.parametrize(("asset", "forward"), [
     ("dividends: [{ex: 0.5y, share: 3%}], vol: 20%", 100 * 0.97 * exp(RATE)),
     ("yield: 1%, dividends: [{ex: 0.5y, share: 3%}, {ex: 0.75y, share: 1%}], vol: 20%", 100 * 0.97 * 0.99 * exp(0.03)),

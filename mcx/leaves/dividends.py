@@ -9,10 +9,11 @@ value of the dividends still to come. Forwards do not depend on where the last o
 from __future__ import annotations
 
 import math
-from bisect import bisect_left, bisect_right
 from collections.abc import Callable, Iterable
 from dataclasses import dataclass
 from itertools import accumulate
+
+import numpy as np
 
 from mcx.checked.market import AssetMarket, Blend
 
@@ -30,13 +31,22 @@ class Payouts:
     cash_times: tuple[float, ...] = ()
     cash: tuple[float, ...] = ()
 
-    def shares_to(self, time: float) -> float:
+    def shares_to(self, time: float | np.ndarray) -> np.number | np.ndarray:
         """The log of what all shares up to a time leave, that of the day included."""
-        return sum(self.share_logs[: bisect_right(self.share_times, time + SAME_TIME)])
+        return self._first(np.searchsorted(self.share_times, time + SAME_TIME, side="right"))
 
-    def shares_at(self, time: float) -> float:
+    def shares_at(self, time: float | np.ndarray) -> np.number | np.ndarray:
         """The log of what the share of this very time leaves."""
-        return self.shares_to(time) - sum(self.share_logs[: bisect_left(self.share_times, time - SAME_TIME)])
+        return self.shares_to(time) - self._first(np.searchsorted(self.share_times, time - SAME_TIME))
+
+    def _first(self, count: np.integer | np.ndarray) -> np.number | np.ndarray:
+        return np.concatenate(([0.0], np.cumsum(self.share_logs)))[count]
+
+
+def pays_cash(asset: AssetMarket) -> bool:
+    """Whether the asset has cash dividends after today, so that the contract's last observation matters."""
+    return (asset.decrement is not None and asset.decrement.points) or any(
+        each.cash and each.time > SAME_TIME for each in asset.dividends)
 
 
 def payouts(asset: AssetMarket, growth: Callable[[float], float], last: float) -> Payouts:
@@ -56,15 +66,15 @@ def payouts(asset: AssetMarket, growth: Callable[[float], float], last: float) -
         when = dividend.time
         if when <= SAME_TIME:  # the spot is ex this one
             continue
-        forward, before = forward * math.exp(growth(when) - growth(before)), when
+        forward, before = forward * np.exp(growth(when) - growth(before)), when
         paid = dividend.cash.value if dividend.cash else 0.0
         kept = paid * _cash_part(asset.blend, when)
         share = (dividend.share.value if dividend.share else 0.0) + (paid - kept) / forward
-        if share >= 1.0 or forward <= 0.0:  # more than there is: the fault of the whole list
+        if np.real(share) >= 1.0 or np.real(forward) <= 0.0:  # more than there is: the fault of the whole list
             kept, share = paid, 0.0
-        if share > 0.0:
-            shares.append((when, math.log1p(-share)))
-        if kept > 0.0 and when <= last + SAME_TIME:
+        if np.real(share) > 0.0:
+            shares.append((when, np.log1p(-share)))
+        if np.real(kept) > 0.0 and when <= last + SAME_TIME:
             cash.append((when, kept))
         forward = forward * (1.0 - share) - kept
     return Payouts(*_columns(shares), *_columns(cash))
@@ -92,17 +102,17 @@ class Escrow:
     @staticmethod
     def of(payouts: Payouts, growth: Callable[[float], float]) -> Escrow:
         """The escrow for the asset's own growth, shares included."""
-        values = [cash * math.exp(-growth(when))
+        values = [cash * np.exp(-growth(when))
                   for when, cash in zip(payouts.cash_times, payouts.cash, strict=True)]
         return Escrow(payouts.cash_times, tuple(accumulate(reversed(values)))[::-1])
 
-    def after(self, time: float) -> float:
+    def after(self, time: float | np.ndarray) -> np.number | np.ndarray:
         """Today's value of the dividends whose ex dates lie after a time."""
-        return self._from(bisect_right(self.times, time + SAME_TIME))
+        return self._from(np.searchsorted(self.times, time + SAME_TIME, side="right"))
 
-    def at_or_after(self, time: float) -> float:
+    def at_or_after(self, time: float | np.ndarray) -> np.number | np.ndarray:
         """The same with a dividend of the day."""
-        return self._from(bisect_left(self.times, time - SAME_TIME))
+        return self._from(np.searchsorted(self.times, time - SAME_TIME))
 
-    def _from(self, number: int) -> float:
-        return self.later[number] if number < len(self.later) else 0.0
+    def _from(self, number: np.integer | np.ndarray) -> np.number | np.ndarray:
+        return np.append(self.later, 0.0)[number]

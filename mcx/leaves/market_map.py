@@ -16,14 +16,16 @@ import numpy as np
 from mcx.checked.contract import Contract
 from mcx.checked.conversions import simulated_rates
 from mcx.checked.market import AssetMarket, Market
+from mcx.dates.dated_contract import DatedContract
 from mcx.faults import Fault
 from mcx.leaves.correlation import correlation_matrix, lower_factor
 from mcx.leaves.curves import log_curve
-from mcx.leaves.dividends import Escrow, Payouts, payouts
+from mcx.leaves.dividends import Escrow, Payouts, payouts, pays_cash
 from mcx.leaves.vols import VolCurve, covariance_integral, vol_curve
 from mcx.tape.formulas import figure
 from mcx.tape.program import Leaf, LeafKind
 from mcx.tape.steps import Makeup
+from mcx.tape.unroll import last_read
 
 MONTHLY, WEEKLY = 12, 52
 SOON = 1e-6  # years: before any node
@@ -41,10 +43,16 @@ class Exchange:
 class MarketMap:
     """What a market says about the assets and the currency of one contract. Both are checked already.
 
-    `last` is the time of the contract's last observation, which cash dividends need: `DatedContract.last`. Beside the
-    assets, numbered in the contract's order, the rates of exchange of composite assets are simulated; they have the
-    numbers after them.
+    `last` is the last time at which the contract reads a level, which cash dividends need (`MarketMap.of` finds it).
+    Beside the assets, numbered in the contract's order, the rates of exchange of composite assets are simulated; they
+    have the numbers after them.
     """
+
+    @classmethod
+    def of(cls, market: Market, dated: DatedContract) -> MarketMap:
+        """The map for a contract with its dates."""
+        in_cash = any(pays_cash(market.assets[name]) for name in dated.contract.assets)
+        return cls(market, dated.contract, last_read(dated) if in_cash else None)
 
     def __init__(self, market: Market, contract: Contract, last: float | None = None):
         self.market, self.contract, self.last = market, contract, last
@@ -104,11 +112,11 @@ class MarketMap:
     def forward(self, asset: str, time: float) -> float:
         """The forward of an asset in the contract's currency, at a fixed rate of exchange (quanto) or at that of the day
         (composite); the spot at time 0."""
-        return self._forward(self.contract.assets.index(asset), time)
+        return float(self._forward(self.contract.assets.index(asset), time))
 
     def escrowed(self, asset: int, time: float) -> float:
         """What the cash dividends still to come after a time are worth then, in the asset's currency."""
-        return self._escrows[asset].after(time) * math.exp(self._own_growth(asset, time))
+        return self._escrows[asset].after(time) * np.exp(self._own_growth(asset, time))
 
     def stripped(self, asset: int) -> float:
         """The spot without the cash dividends to come: what the vol is about."""
@@ -120,7 +128,7 @@ class MarketMap:
 
     def funded_discount(self, time: float) -> float:
         """The discount factor for the issuer's payments: the funding spread added to the zero rate."""
-        return math.exp(self._rates.log(time) + self._funding.log(time))
+        return float(np.exp(self._rates.log(time) + self._funding.log(time)))
 
     def vol_to(self, asset: str, time: float) -> float:
         """The Black vol of an asset to a time: of its level without cash dividends to come, in the contract's currency
@@ -147,7 +155,7 @@ class MarketMap:
         asset, start, end = leaf.asset, leaf.start, leaf.end
         match leaf.kind:
             case LeafKind.LOG_SPOT:
-                return math.log(self._stripped[asset] if asset < len(self.quotes) else self._fx_spot(asset))
+                return np.log(self._stripped[asset] if asset < len(self.quotes) else self._fx_spot(asset))
             case LeafKind.FORWARD:
                 return self._forward(asset, end)
             case LeafKind.VARIANCE:
@@ -161,7 +169,7 @@ class MarketMap:
                 return self.escrowed(asset, end)
             case LeafKind.MEAN_ESCROW:
                 before = self._own_growth(asset, end) - self._payouts[asset].shares_at(end)
-                closing = self._escrows[asset].at_or_after(end) * math.exp(before)
+                closing = self._escrows[asset].at_or_after(end) * np.exp(before)
                 return 0.5 * (self.escrowed(asset, start) + closing)
             case LeafKind.DISCOUNT:
                 return self.funded_discount(end)
@@ -186,18 +194,16 @@ class MarketMap:
 
     def _paid_out(self, number: int) -> Payouts:
         asset = self.quotes[number]
-        in_cash = any(each.cash and each.time > 0.0 for each in asset.dividends) or (
-            asset.decrement is not None and asset.decrement.points)
-        assert self.last is not None or not in_cash, "cash dividends need the time of the last observation"
-        return payouts(asset, partial(self._base_growth, number), math.inf if self.last is None else self.last)
+        assert self.last is not None or not pays_cash(asset), "cash dividends need the time of the last observation"
+        return payouts(asset, partial(self._base_growth, number), self.last or 0.0)
 
     def _forward(self, number: int, time: float) -> float:
         meets = self._exchanges[number]
         composite = meets is not None and meets.number is not None
         growth = self._own_growth if composite else self._growth
-        level = self._stripped[number] * math.exp(growth(number, time)) + self.escrowed(number, time)
+        level = self._stripped[number] * np.exp(growth(number, time)) + self.escrowed(number, time)
         level = level if time > 0.0 else self.quotes[number].spot.value  # to the last digit
-        return level * self._fx_spot(meets.number) * math.exp(self._fx_growth(meets.number, time)) if composite else level
+        return level * self._fx_spot(meets.number) * np.exp(self._fx_growth(meets.number, time)) if composite else level
 
     def _fx_spot(self, number: int) -> float:
         rate = self.rates_of_exchange[number - len(self.quotes)]

@@ -45,7 +45,7 @@ def readback(dated: DatedContract, market: Market | None, path: PathResult | Non
     """Everything that the contract says; with a market also what the market says on its dates."""
     contract = dated.contract
     words, settled = Words(dated), Settled(contract)
-    market_map = MarketMap(market, contract, dated.last.time) if market else None
+    market_map = MarketMap.of(market, dated) if market else None
     unrolled = unroll(dated, nodes=market_map.nodes(), makeup=market_map.makeup()) if market_map else unroll(dated, nodes=())
     return Readback(
         contract=contract.title,

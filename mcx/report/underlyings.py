@@ -8,6 +8,7 @@ from collections.abc import Iterator
 from mcx.checked.market import AssetMarket
 from mcx.dates.dated_contract import DatedContract
 from mcx.leaves.market_map import MarketMap
+from mcx.report.given_path import day_of
 from mcx.report.wording import figure
 
 ESCROWED = ("cash dividends of {name} are escrowed: those with ex dates up to the last observation, {last}, are worth "
@@ -20,7 +21,7 @@ def underlyings(dated: DatedContract, market: MarketMap) -> Iterator[str]:
         yield from _given_up(asset)
         if number in market.makeup().cash:
             worth = asset.spot.value - market.stripped(number)
-            yield ESCROWED.format(name=asset.name, last=dated.last, worth=f"{worth:.6g}", spot=figure(asset.spot.value))
+            yield ESCROWED.format(name=asset.name, last=day_of(market.last, dated), worth=f"{worth:.6g}", spot=figure(asset.spot.value))
         yield from _converted(asset, market)
 
 

@@ -74,6 +74,14 @@ def unroll(dated: DatedContract, *, nodes: Sequence[float], makeup: Makeup = PLA
     return Unrolled(tape, observed, grid, levels, walk.notes(makeup))
 
 
+def last_read(dated: DatedContract) -> float:
+    """The last time at which the contract reads a level, in years; 0 if it reads none later."""
+    walk = _Walk(dated)
+    walk.run()
+    observed = drop_dead_code(walk.builder.tape(walk.ledger.outputs()))
+    return max((step.payload.time for step in observed.instructions if isinstance(step.payload, LevelKey)), default=0.0)
+
+
 def _unknown_laws(tape: Tape, makeup: Makeup) -> list[Fault]:
     """Continuous watches of an asset with cash dividends that is converted at the rate of the day."""
     return sorted({Fault(step.place, UNKNOWN_SUM) for step in tape.instructions
