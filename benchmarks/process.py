@@ -3,7 +3,7 @@
     python benchmarks/process.py             # all
     python benchmarks/process.py --quick     # without memory, which takes 10^8 paths
 
-Every number is of fresh processes that run `mcx price`, as after an installation: compiled kernels and bytecode are kept
+Every number is of fresh processes that run `mcx price`, as after an installation: kernels and bytecode are kept compiled
 in a folder of this benchmark's own. Where two are compared they run in turns.
 """
 

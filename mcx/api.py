@@ -304,5 +304,5 @@ def _threads(threads: object) -> int | None:
 
 def _reduction(reduction: str) -> None:
     if reduction not in REDUCTIONS:
-        raise RequestError(f"the variance reduction '{reduction}' is not known to this version; it knows 'none', others "
-                           f"come with a later version")
+        raise RequestError(f"the variance reduction '{reduction}' is not known to this version; it knows 'none', "
+                           f"others come with a later version")

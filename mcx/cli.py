@@ -5,6 +5,7 @@
 
 from __future__ import annotations
 
+import atexit
 import gc
 import json
 import os
@@ -151,7 +152,10 @@ def main(arguments: list[str] | None = None) -> None:
     """The door: runs a command and ends the process with its exit code."""
     from mcx.faults import InputError, Refusal, RequestError
 
-    gc.set_threshold(1_000_000)  # what imports make stays: looking for garbage in it takes a tenth of a start
+    # What imports make stays until the process ends. Looking through it for garbage, on the way and once more before
+    # the end, would take a quarter of a short command's time.
+    gc.set_threshold(1_000_000)
+    atexit.register(gc.freeze)
     for stream in (sys.stdout, sys.stderr):
         if hasattr(stream, "reconfigure"):
             stream.reconfigure(errors="replace")  # a terminal without '±' is no reason to fail

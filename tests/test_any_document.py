@@ -10,7 +10,7 @@ from pathlib import Path
 
 import pytest
 from front_door import EXAMPLES, PLACED, mcx
-from hypothesis import HealthCheck, given, settings
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 SMALL = ("european", "digital", "asian", "barrier", "cliquet", "touch", "reverse_convertible", "harbour_lantern",
@@ -21,16 +21,15 @@ REFUSED = re.compile(r"'.*' is not a finite number on path \d+ ")  # sound docum
 WORDS = re.compile(rb"[A-Za-z_][A-Za-z_.]*|[0-9][0-9.]*|\s+|.", re.DOTALL)
 SPICE = (
     b"", b"0", b"-1", b"1e308", b".nan", b".inf", b"true", b"null", b"~", b"[]", b"{}", b"[", b"]", b"{", b"}", b":",
-    b"-", b"\n", b"  ", b"\t", b"#", b"'", b'"', b"&a", b"*a", b"!!float", b"|", b">", b"%", b"%YAML 1.1", b"---", b"...",
-    b"1y", b"0y", b"10000y", b"-1y", b"2027-02-30", b"0001-01-01", b"9999-12-31", b"1 business day", b"1e9",
+    b"-", b"\n", b"  ", b"\t", b"#", b"'", b'"', b"&a", b"*a", b"!!float", b"|", b">", b"%", b"%YAML 1.1", b"---",
+    b"...", b"1y", b"0y", b"10000y", b"-1y", b"2027-02-30", b"0001-01-01", b"9999-12-31", b"1 business day", b"1e9",
     b"99999999999999999999", b"spot", b"performance", b"__class__", b"lambda", b"1 if 2", b"**", b"previous(spot)",
     b"once", b"observations.last", b"\x00", b"\xff", b"\xef\xbb\xbf", "\u00e9\u2028\U0001f600".encode(), b"100", b"70%",
     b"1800%", b"25 bp", b"EUR", b"USD", b"harbour", b"lantern", b"until", b"every", b"count", b"continuous", b"expiry",
     b"fixings", b"quanto", b"dividends",
 )
 
-thoroughly = settings(suppress_health_check=[HealthCheck.function_scoped_fixture, HealthCheck.too_slow],
-                      max_examples=2 * settings.default.max_examples)
+thoroughly = settings(max_examples=2 * settings.default.max_examples)
 
 
 def hold(data: bytes, command: str = "price") -> None:

@@ -74,7 +74,7 @@ def test_a_date_on_which_no_level_is_read_is_no_observation():
     text = """
 payoff: with_fixed_end
 about: A call, and a fixed amount long after it.
-terms: {expiry: {type: date}, later: {type: date}
+terms: {expiry: {type: date}, later: {type: date}}
 events:
   - at: expiry
     pay: max(spot - 100, 0)
@@ -86,7 +86,7 @@ currency: EUR
 units: 1
 assets: [harbour]
 payoff: with_fixed_end
-terms: {expiry: 1y, later: LATER
+terms: {expiry: 1y, later: LATER}
 """ + market(TWO.replace("cash: 3}]", "cash: 3}, {ex: 1.25y, cash: 7}]"))
     near, far = (prepare(text.replace("LATER", later)).estimates(2**10, SEED)["leg: call"] for later in ("1y", "2y"))
     assert near == far

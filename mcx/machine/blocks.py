@@ -89,6 +89,15 @@ def _first_bad(registers, outputs, start, count):
     return -1  # all finite: only the sum of squares overflowed
 
 
+def _numbered(numbers: range | np.ndarray, first: int, end: int) -> np.ndarray:
+    """Numbers first .. end - 1 as an array; for those past the last others serve. Each thread makes its own of a range:
+    one array for all threads would take new pages of memory, which costs them 3 % of their time."""
+    part = numbers[first:end]
+    if isinstance(part, range):
+        part = np.arange(part.start, part.stop, dtype=np.uint64)
+    return part if len(part) == end - first else np.resize(part, end - first)
+
+
 class Crew:
     """Threads, each with room to work, that run one kernel code; a context manager, for one caller."""
 
@@ -108,16 +117,14 @@ class Crew:
             self._pool.shutdown()
 
     def run(
-        self, numbers: np.ndarray, values: np.ndarray | None = None
+        self, numbers: range | np.ndarray, values: np.ndarray | None = None
     ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Means, squares and first bad value of each group of the given path numbers, as `sweep` writes them.
 
-        numbers (paths,) uint64; values (paths, outputs) float64 is filled if given.
+        numbers a range, or (paths,) uint64; values (paths, outputs) float64 is filled if given.
         """
         paths, outputs = len(numbers), len(self.code.outputs)
         groups, blocks = -(-paths // GROUP), -(-paths // self.lanes)
-        missing = blocks * self.lanes - paths
-        padded = np.concatenate([numbers, np.resize(numbers, missing)]) if missing else numbers
         means, squares = np.empty((groups, outputs)), np.empty((groups, outputs))
         bad = np.empty(groups, dtype=np.int64)
         pieces = min(blocks, self.threads * _TASKS) if self._pool else 1
@@ -130,7 +137,7 @@ class Crew:
             written = np.empty((0, outputs)) if values is None else values[first:last]
             room = self._rooms.pop()
             sweep(self.code.code, self.code.scalars, self.code.outputs, *self._draws,
-                  padded[first:end], last - first, *room,
+                  _numbered(numbers, first, end), last - first, *room,
                   means[these], squares[these], bad[these], written)  # fmt: skip
             self._rooms.append(room)
 

@@ -30,7 +30,7 @@ _DEAR = {
 _BY_FORM = np.array([_DEAR.get(form, _USUAL) for form in Form])
 
 
-_BATCH = 1 << 17  # paths between two reports of progress,
+_BATCH = 1 << 19  # paths between two reports of progress,
 _BATCH_TIME = 2.5e8  # unless they take longer than this on one core: an interruption must be prompt
 _CACHE = 3 << 16  # bytes of a register file: with room to spare in a second-level cache of 512 KB
 

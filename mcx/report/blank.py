@@ -86,7 +86,8 @@ def _about(term: Term) -> str:
         written += f", or a list for the dates of {term.per}"
     elif term.type == "dates" and term.per:
         written += f"; one for each of {term.per}"
-    bounds = [f"{word} {figure(getattr(term, key), term.type)}" for key, word in BOUNDS if getattr(term, key) is not None]
+    limits = [(word, getattr(term, key)) for key, word in BOUNDS]
+    bounds = [f"{word} {figure(limit, term.type)}" for word, limit in limits if limit is not None]
     listed = ", ".join((written, *bounds))
     return f"{term.about} ({listed})" if term.about else listed
 

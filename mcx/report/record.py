@@ -21,7 +21,7 @@ from mcx.text.documents import parse_documents
 from mcx.text.located import Document
 
 FORMAT = 1
-PACKAGES = ("mcx", "numpy", "numba", "llvmlite", "scipy", "pyyaml", "holidays")
+PACKAGES = ("mcx", "numpy", "numba", "llvmlite", "scipy", "pyyaml", "holidays", "python-dateutil")
 CHECKSUM = "sha256"
 CLOSE = 1e-12  # relative, on another type of processor
 # How long it took, how the number of paths was found, and what is worded: sentences change with versions.
@@ -111,7 +111,8 @@ def read_record(file: str | Path) -> dict:
         raise RequestError(f"{file}: the record has format {record['record']!r}; this version reads format {FORMAT}")
     stated = record.pop(CHECKSUM, None)
     if stated != _checksum(record):
-        raise RequestError(f"{file}: the record's checksum does not hold: it was cut short or edited since it was written")
+        raise RequestError(f"{file}: the record's checksum does not hold: it was cut short or edited since it was "
+                           f"written")
     if not _whole(record):
         raise RequestError(f"{file}: the record lacks inputs, requests or results, though its checksum holds")
     return record

@@ -313,9 +313,9 @@ class Replay(Result):
     """Whether a stored valuation reproduces: `mcx replay`.
 
     `identical`: every number, name and date is the same, to the last bit on the same type of processor, within 1e-12
-    elsewhere. `largest_difference` is the largest of |difference| / max(1, |stored|); `first_difference` names the first
-    result that differs ('' where none does), with what was stored and found. `changed` lists what is not as it was when
-    the record was written: versions, source and processor.
+    elsewhere. `largest_difference` is the largest of |difference| / max(1, |stored|); `first_difference` names the
+    first result that differs ('' where none does), with what was stored and found. `changed` lists what is not as it
+    was when the record was written: versions, source and processor.
     """
 
     identical: bool

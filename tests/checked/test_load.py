@@ -256,6 +256,12 @@ def test_times_and_dates_do_not_mix():
                                                                                                   TEXTBOOK)[1]
 
 
+def test_times_that_cannot_be_read():
+    """Whether a contract uses times is not judged by dates that cannot be read."""
+    (fault,) = made(OPTION.replace("expiry: 1y", "expiry: 1yr"), TEXTBOOK)[1]
+    assert fault.startswith("a.yaml:6:42: expected a date such as '2026-11-16', a time such as '0.25y'")
+
+
 def test_two_markets():
     """Two markets in one call are an error."""
     assert made(OPTION, TEXTBOOK,

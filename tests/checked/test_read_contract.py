@@ -372,3 +372,10 @@ def test_what_stands_there_already_is_not_offered():
     """For a term that is not known, only those that are still blank are offered."""
     assert faults_of("  watched: {", "  barrier_watched: {") == [
         "c.yaml:17:3: 'barrier_watched' is not a key of the terms of 'sampler'; did you mean 'watched'?"]
+    every = ("'initial', 'dates', 'barrier', 'weights', 'first_call', 'watched', 'side', 'paid_on', 'memory', 'payer' "
+             "or 'cap'")
+    assert faults_of("  side: call", "  side: call\n  zzz: 1") == [
+        f"c.yaml:19:3: 'zzz' is not a key of the terms of 'sampler'; expected {every}"]
+    assert faults_of("  side: call", "  zzz: call") == [
+        "c.yaml:11:3: 'side' is missing in the terms of 'sampler'",
+        "c.yaml:18:3: 'zzz' is not a key of the terms of 'sampler'; expected 'side'"]

@@ -14,7 +14,7 @@ from mcx.dates.dating import date_contract
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.plan import FEWEST_PLANNED, FIRST_PILOT, precision
 from mcx.estimators.price import Ready, Valuation, prepare, value
-from mcx.machine.run import NonFinitePath, levels
+from mcx.machine.run import NonFinitePath, Stream, levels
 
 THOUSAND = precision(1000, None, None)
 DIVIDES = """payoff: divides
@@ -109,6 +109,20 @@ def test_pilot_and_run_share_no_path():
     alone = value(autocall(), precision(planned.plan.paths, None, None), seed=SEED)
     assert planned.results == alone.results
     assert planned.price.half_width <= 0.01
+
+
+@pytest.mark.parametrize("wish", [precision(None, "1%", None), precision(None, None, 0.01)])
+def test_pilots_draw_from_a_stream_of_their_own(wish, monkeypatch: pytest.MonkeyPatch):
+    """Every run before the one that counts, which alone draws from the main stream."""
+    from mcx.estimators import price as module
+
+    streams = []
+    for name in ("run", "values_by_path"):
+        original = getattr(module, name)
+        monkeypatch.setattr(module, name, lambda *given, call=original, stream=Stream.MAIN, **more:
+                            streams.append(stream) or call(*given, stream=stream, **more))
+    value(autocall(), wish, seed=SEED)
+    assert len(streams) >= 2 and streams[-1] == Stream.MAIN and set(streams[:-1]) == {Stream.PILOT}
 
 
 def test_seeds_differ():

@@ -223,11 +223,11 @@ def test_register_file_of_a_block_stays_in_the_cache():
 
 
 def test_batches_are_whole_blocks_and_short():
-    """A batch is a whole number of blocks, at most 2^17 paths, fewer for long programs; cost grows with dates."""
+    """A batch is a whole number of blocks, at most 2^19 paths, fewer for long programs; cost grows with dates."""
     for dates in (1, 52, 2000):
         code = prepare(asian(dates))
         lanes = lanes_for(code.rows)
         batch = batch_for(code, lanes)
-        assert batch % lanes == 0 and lanes <= batch <= 1 << 17
+        assert batch % lanes == 0 and lanes <= batch <= 1 << 19
         assert batch * cost(asian(dates)) < 3e8
     assert cost(asian(2000)) / cost(asian(1000)) == pytest.approx(2.0, rel=0.01)

@@ -13,6 +13,8 @@ from mcx.checked.library import shipped, shipped_names
 from mcx.checked.payoff import Payoff, Term
 from mcx.checked.read_payoff import read_payoff
 from mcx.faults import InputError, RequestError
+from mcx.report.blank import blank as fill_in
+from mcx.text.documents import parse_documents
 
 ASSETS = ("alder", "birch", "cedar")
 EMPTY = re.compile(r"( *)([\w./]+):\s*(#.*)?")
@@ -97,6 +99,16 @@ def test_day_count_is_asked_for_only_where_it_counts():
     """Year fractions need one; a European option does not."""
     assert "day_count:" in package.blank("reverse_convertible", ["alder"])
     assert "day_count:" not in package.blank("european", ["alder"])
+
+
+def test_terms_with_a_default_are_optional():
+    """They stand behind a comment sign, like those that need not be stated."""
+    text = b"payoff: own\nabout: x\nterms:\n  share: {type: percent, default: 50%}\n  on: {type: date}\n" \
+           b"events:\n  - at: on\n    pay: share\n"
+    payoff, faults = read_payoff(parse_documents(text, "own.yaml")[0][0])
+    lines = fill_in(payoff, ["alder"]).splitlines()
+    assert faults == () or faults == []
+    assert [line.split(":")[0] for line in lines if "share" in line or "  on:" in line] == ["  # share", "  on"]
 
 
 def test_from_the_command_line():

@@ -19,8 +19,8 @@ from mcx.tape.program import Instruction, Output, Tape
 DIGITAL = CALL.replace("european", "digital").replace("strike: 100", "pays: cash, amount: 1, strike: 100")
 
 
-def run(values: dict[str, Estimate] | None = None, plan: Plan | None = None, stages: tuple = (), interrupted: bool = False,
-        z: float = 0.0, met: bool | None = None, op: Op = Op.NORMAL) -> list[str]:
+def run(values: dict[str, Estimate] | None = None, plan: Plan | None = None, stages: tuple = (),
+        interrupted: bool = False, z: float = 0.0, met: bool | None = None, op: Op = Op.NORMAL) -> list[str]:
     """The warnings of a made-up valuation: its price, and conditions by name."""
     found = {"price": Estimate(1.0, 0.01, 10_000), **(values or {})}
     outputs = tuple(Output(name, 0, kind="price" if name == "price" else "condition", subject=name) for name in found)
@@ -32,7 +32,8 @@ def run(values: dict[str, Estimate] | None = None, plan: Plan | None = None, sta
 
 def test_nothing_to_warn_of():
     """A plain run."""
-    assert run({"hit": Estimate(0.2, 0.004, 10_000)}, stages=(Estimate(1.01, 0.02, 2500), Estimate(1.0, 0.01, 10_000))) == []
+    stages = Estimate(1.01, 0.02, 2500), Estimate(1.0, 0.01, 10_000)
+    assert run({"hit": Estimate(0.2, 0.004, 10_000)}, stages=stages) == []
 
 
 def test_interrupted():
@@ -70,7 +71,8 @@ def test_martingale_test_fails():
     """Beyond four errors, with how often chance does that: once in 15,787 runs at exactly four."""
     assert run(z=-3.9) == []
     (said,) = run(z=-4.0001)
-    assert said.startswith("the mean of harbour is 4.0 standard errors from its forward: this happens by chance once in 15,7")
+    assert said.startswith("the mean of harbour is 4.0 standard errors from its forward: this happens by chance once "
+                           "in 15,7")
 
 
 def test_price_jumps():
@@ -112,15 +114,15 @@ def test_limits_touch_the_contract(tmp_path: Path):
 
 
 def test_a_digital_turns_at_its_strike(tmp_path: Path):
-    """Its payment jumps at a level: the vol there is another under skew, which a call without condition does not say."""
+    """Its payment jumps at a level: the vol there is another under skew."""
     assert "bracket" in said(tmp_path, DIGITAL + MARKET, "limits")
 
 
 def test_cautions_are_always_there(tmp_path: Path):
     """Sampling only, the legal terms prevail, no advice; of probabilities only where some are shown."""
     plain = said(tmp_path, CALL + MARKET, "cautions")
-    for words in ("the error covers sampling only", "the legal terms and the calculation agent's determinations prevail",
-                  "licensed professional under local rules; not advice"):
+    for words in ("the error covers sampling only", "the legal terms and the calculation agent's determinations "
+                  "prevail", "licensed professional under local rules; not advice"):
         assert words in plain
     assert "not forecasts" not in plain
     assert "not forecasts" in "\n".join(package.price(EXAMPLES / "harbour_lantern.yaml", paths=64).cautions)

@@ -88,6 +88,18 @@ def test_a_gap_before_the_end_counts(tmp_path: Path):
         package.readback(NOTE, path=file)
 
 
+def test_a_missing_level_decides_nothing(tmp_path: Path):
+    """Not even where a condition says 'not': the end that it would bring about on that date does not count."""
+    own = ("payoff: own\nabout: ends early\nterms: {dates: {type: dates}}\nevents:\n  - at: dates\n    name: out\n"
+           "    if: not spot < 100\n    then:\n      - pay: 1\n      - end\n")
+    contract = CALL.replace("european", "own").replace("{side: call, strike: 100, expiry: 1y}",
+                                                       "{dates: {count: 2, until: 1y}}")
+    files = written(tmp_path, contract), written(tmp_path, own, "own.yaml")
+    with pytest.raises(InputError, match="no level of 'harbour' for 0.5y; "):
+        package.readback(*files, path=written(tmp_path, "harbour: {1y: 90}", "levels.yaml"))
+    assert package.readback(*files, path=written(tmp_path, "harbour: {0.5y: 100}", "levels.yaml")).path.ended == "0.5y"
+
+
 BARRIER = """contract: Barrier
 currency: EUR
 units: 2
@@ -165,5 +177,6 @@ def test_wrong_requests(tmp_path: Path):
     file = written(tmp_path, "harbour: {1y: 130}", "levels.yaml")
     with pytest.raises(RequestError, match="one contract at a time; the files hold 2"):
         package.readback(EXAMPLES / "autocall.yaml", path=file)
-    refused(mcx("readback", written(tmp_path, CALL), "--path", tmp_path / "none.csv"), "none.csv: the levels cannot be read")
-    refused(mcx("readback", written(tmp_path, CALL), "--path", written(tmp_path, "x: {1y: -1}", "l.yaml")), "l.yaml:1:1: ")
+    call, wrong = written(tmp_path, CALL), written(tmp_path, "x: {1y: -1}", "l.yaml")
+    refused(mcx("readback", call, "--path", tmp_path / "none.csv"), "none.csv: the levels cannot be read")
+    refused(mcx("readback", call, "--path", wrong), "l.yaml:1:1: ")

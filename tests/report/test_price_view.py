@@ -41,7 +41,8 @@ def test_headline(note: PriceResult, price: float, error: float, percent: bool, 
     """Price and half-width of the 95 % interval, in the unit of the price, with as many decimals as the error says."""
     half = 1.959963984540054 * error
     size = {} if percent else {"notional": None, "units": 1.0}
-    assert headline(replace(note, price=price, standard_error=error, interval95=(price - half, price + half), **size)) == said
+    result = replace(note, price=price, standard_error=error, interval95=(price - half, price + half), **size)
+    assert headline(result) == said
 
 
 def test_probabilities_by_date(note: PriceResult, monkeypatch: pytest.MonkeyPatch):
@@ -57,6 +58,16 @@ def test_probabilities_by_date(note: PriceResult, monkeypatch: pytest.MonkeyPatc
     assert rows[1:] == ["ever 10.00 % 20.00 % 30.00 % 40.00 % 25.00 %", "0.5y 1.00 % 2.00 % 3.00 % 4.00 % 25.00 %",
                         "10y 2.00 % 4.00 % 6.00 % 8.00 %", "not ended early 75.00 %", "event 5", "ever 50.00 %"]
     assert "standard errors of at most 3.000 %" in shown(monkeypatch, show_price, result)
+
+
+def test_facts(note: PriceResult, monkeypatch: pytest.MonkeyPatch):
+    """The value in currency with its error, for how much; how many paths and why; the seed."""
+    result = replace(note, value=984_285.104, value_standard_error=2753.8, expected_life=1.81849,
+                     expected_life_standard_error=0.01)
+    words = " ".join(shown(monkeypatch, show_price, result).split())
+    assert "value 984,285.10 EUR for 1,000,000 EUR notional, standard error 2,753.80 standard error" in words
+    assert "paths 1,000 in " in words and "asked for: 1,000 paths" in words
+    assert f"seed {SEED}; variance reduction: none" in words and "expected life 1.818 years" in words
 
 
 def test_legs_with_a_sum(note: PriceResult, monkeypatch: pytest.MonkeyPatch):

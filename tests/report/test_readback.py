@@ -26,15 +26,16 @@ def readbacks(example: Path) -> tuple[Readback, ...]:
 def read(tmp_path: Path, payoff: str, terms: str = "{level: 100, expiry: 1y}", market: str = MARKET) -> Readback:
     """The readback of a textbook contract on a definition of its own."""
     contract = CALL.replace("european", "own").replace("{side: call, strike: 100, expiry: 1y}", terms)
-    return package.readback(written(tmp_path, f"{contract}---\npayoff: own\nabout: made for this test\n{payoff}{market}"))
+    own = f"---\npayoff: own\nabout: made for this test\n{payoff}"
+    return package.readback(written(tmp_path, contract + own + market))
 
 
 def test_terms_as_the_contract_writes_them():
     """Every term, in the definition's order, with its words."""
     (found,) = readbacks(NOTE)
     terms = {term.name: term for term in found.terms}
-    assert list(terms) == ["initial", "observations", "first_call", "call_barrier", "coupon_barrier", "coupon", "memory",
-                           "knock_in", "watched", "strike"]
+    assert " ".join(terms) == ("initial observations first_call call_barrier coupon_barrier coupon memory knock_in "
+                               "watched strike")
     assert terms["initial"].value == "harbour 4210.5, lantern 812.4"
     assert terms["observations"].value == "every 3 months: 12 dates from 2027-02-16 to 2029-11-16"
     assert terms["call_barrier"].value.startswith("100 %; 100 %; 100 %; 95 %;")
@@ -65,7 +66,8 @@ def test_events_in_plain_sentences():
     assert "of observations from first_call on (2027-11-16 to 2029-11-16)" in events["called"].text
     assert events["called"].text.endswith("the contract ends: nothing later is observed or newly owed, what is already "
                                           "owed is still paid.")
-    assert events["knocked in"].ends_here == ("It no longer happens on a date on which 'called' has ended the contract.",)
+    assert events["knocked in"].ends_here == (
+        "It no longer happens on a date on which 'called' has ended the contract.",)
 
 
 def test_every_date_is_in_the_table():
@@ -106,7 +108,8 @@ def test_vol_term_structure_on_the_dates(tmp_path: Path):
     """Black vols at the nodes are those of the market; between them total variance is linear."""
     market = MARKET.replace("vol: 22%", "vol: {6m: 20%, 1y: 30%}")
     contract = CALL.replace("payoff: european", "payoff: asian").replace(
-        "{side: call, strike: 100, expiry: 1y}", "{side: call, average_type: arithmetic, strike_type: fixed, strike: 100, "
+        "{side: call, strike: 100, expiry: 1y}",
+        "{side: call, average_type: arithmetic, strike_type: fixed, strike: 100, "
         "averaging: {count: 4, until: 1y}, expiry: 1y}")
     vols = {line.date: line.assets[0].vol for line in package.readback(written(tmp_path, contract + market)).market}
     between = sqrt((0.2**2 * 0.5 + (0.3**2 - 0.2**2 * 0.5) / 2) / 0.75)
@@ -134,7 +137,8 @@ def test_without_a_market(tmp_path: Path):
 ])
 def test_formulas_in_words(formula: str, words: str, tmp_path: Path):
     """Comparisons are spelled out with the term's number, brackets stay where they decide."""
-    payoff = f"terms: {{level: {{type: number}}, expiry: {{type: date}}}}\nevents:\n  - at: expiry\n    pay: {formula}\n"
+    terms = "terms: {level: {type: number}, expiry: {type: date}}"
+    payoff = f"{terms}\nevents:\n  - at: expiry\n    pay: {formula}\n"
     (event,) = read(tmp_path, payoff).events
     assert event.text == f"On expiry (1y): pays {words} for each unit, due the same day."
 
@@ -144,7 +148,8 @@ def test_formulas_in_words(formula: str, words: str, tmp_path: Path):
     ("total: spot", "the sum of spot, so far,"), ("total: 1", "1 for each date, so far,"),
     ("total: spot > 90", "how often spot is above 90, so far,"), ("lowest: spot", "the lowest spot, so far,"),
     ("highest: spot", "the highest spot, so far,"), ("ever: spot < 90", "whether ever spot is below 90, so far,"),
-    ("always: spot >= 90", "whether always spot is at or above 90, so far,"), ("latest: spot", "the latest spot, so far,"),
+    ("always: spot >= 90", "whether always spot is at or above 90, so far,"),
+    ("latest: spot", "the latest spot, so far,"),
     ("product: spot / 100", "the product of spot / 100, so far,"),
 ])
 def test_running_values_in_words(running: str, words: str, tmp_path: Path):
@@ -167,6 +172,20 @@ def test_what_the_terms_rule_out_is_left_away():
         assert ("at or below" in text) == (terms["direction"] == "down")
 
 
+@pytest.mark.parametrize(("kind", "words"), [
+    ("knocked", "On expiry (1y), if spot is below level (100): pays 1 for each unit, due the same day."),
+    ("always", "On expiry (1y): pays 1 for each unit, due the same day."),
+    ("never", "Never in this contract: its terms rule the condition out."),
+])
+def test_decided_parts_of_conditions_are_left_away(kind: str, words: str, tmp_path: Path):
+    """What a choice decides of an 'and' or an 'or' is not said; what it rules out altogether is."""
+    payoff = ("terms:\n  level: {type: number}\n  kind: {type: choice, of: [knocked, always, never]}\n"
+              "  expiry: {type: date}\nevents:\n  - at: expiry\n    if: kind != 'never' and (kind == 'always' or spot < level)\n"
+              "    then:\n      - pay: 1\n")
+    (event,) = read(tmp_path, payoff, f"{{level: 100, kind: {kind}, expiry: 1y}}").events
+    assert event.text == words
+
+
 def test_watches_that_are_refused_are_said(tmp_path: Path):
     """A continuous watch on two assets: refused, with the place of the definition, where `price` refuses it too."""
     payoff = ("assets: 2\nterms: {level: {type: number}, watched: {type: watch}, expiry: {type: date}}\nrunning:\n"
@@ -174,7 +193,8 @@ def test_watches_that_are_refused_are_said(tmp_path: Path):
               "events:\n  - at: expiry\n    pay: 0 if hit else 1\n")
     contract = CALL.replace("european", "own").replace("[harbour]", "[harbour, lantern]").replace(
         "{side: call, strike: 100, expiry: 1y}", "{level: 80, watched: {continuous: [0y, 1y]}, expiry: 1y}")
-    market = MARKET + "  lantern: {spot: 100, currency: EUR, yield: 0%, vol: 30%}\ncorrelation: {harbour/lantern: 50%}\n"
+    market = MARKET + ("  lantern: {spot: 100, currency: EUR, yield: 0%, vol: 30%}\n"
+                       "correlation: {harbour/lantern: 50%}\n")
     file = written(tmp_path, f"{contract}---\npayoff: own\nabout: made for this test\n{payoff}{market}")
     (watch,) = package.readback(file).watches
     assert watch.law == "refused" and str(file) in watch.reason

@@ -24,7 +24,8 @@ def strict(value: object) -> object:
 @pytest.mark.parametrize("record", RECORDS, ids=lambda record: record.__name__)
 def test_records_are_frozen_and_say_what_they_are(record: type):
     """Nobody changes a result; each has its docstring and can say itself."""
-    assert record.__dataclass_params__.frozen and issubclass(record, Result) and not record.__doc__.startswith(record.__name__)
+    assert record.__dataclass_params__.frozen and issubclass(record, Result)
+    assert not record.__doc__.startswith(record.__name__)  # a docstring of its own
 
 
 def test_every_digit_survives():
@@ -40,7 +41,8 @@ def test_every_digit_survives():
 
 
 @pytest.mark.parametrize("make", [
-    lambda: package.price(EXAMPLES / "harbour_lantern.yaml", paths=64), lambda: package.readback(EXAMPLES / "cliquet.yaml"),
+    lambda: package.price(EXAMPLES / "harbour_lantern.yaml", paths=64),
+    lambda: package.readback(EXAMPLES / "cliquet.yaml"),
     lambda: package.readback(EXAMPLES / "harbour_lantern.yaml"), package.payoffs, lambda: package.definition("touch")])
 def test_every_verb_gives_plain_data(make):
     """What `to_dict` gives is what JSON gives back."""
@@ -73,5 +75,7 @@ def test_units_agree():
     for condition in result.conditions:
         assert all(each.probability <= condition.probability + 1e-15 for each in condition.dates)
         assert 0.0 <= condition.probability <= 1.0
+    for amount in (*result.legs, *result.parts):
+        assert amount.value == pytest.approx(amount.price * result.notional, rel=1e-15)
     low, high = result.interval95
     assert high - low == pytest.approx(2 * 1.959963984540054 * result.standard_error, rel=1e-12)

@@ -27,7 +27,8 @@ def rendered(monkeypatch: pytest.MonkeyPatch, width: int, fill) -> str:
 
 
 HEADS = ("contract", "%", "standard error", "EUR")
-ROWS = (("Harbour and Lantern memory autocall 2029", "100.20", "0.28", "1,002,034.99"), ("other", "-5.94", "0.24", "-59.00"))
+ROWS = (("Harbour and Lantern memory autocall 2029", "100.20", "0.28", "1,002,034.99"),
+        ("other", "-5.94", "0.24", "-59.00"))
 
 
 def test_wide_table(monkeypatch: pytest.MonkeyPatch):
@@ -109,8 +110,8 @@ def test_decimals(error: float, digits: int, fewest: int, shown: int):
 
 
 @pytest.mark.parametrize(("number", "places", "shown"), [
-    (1234567.891, 2, "1,234,567.89"), (-0.001, 2, "0.00"), (-0.0, 0, "0"), (-0.006, 2, "-0.01"), (-1234.5, 1, "-1,234.5"),
-    (-0.0004, 3, "0.000"),
+    (1234567.891, 2, "1,234,567.89"), (-0.001, 2, "0.00"), (-0.0, 0, "0"), (-0.006, 2, "-0.01"),
+    (-1234.5, 1, "-1,234.5"), (-0.0004, 3, "0.000"),
 ])
 def test_fixed(number: float, places: int, shown: str):
     """Thousands parted, and never minus nothing."""
