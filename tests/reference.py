@@ -300,8 +300,8 @@ class Reference:
     def path(self, normal: Callable[[int, int], float], uniform: Callable[[int, int, str], float]) -> Result:
         """What the contract pays on one path.
 
-        `normal(step, k)` is the normal of the k-th moving asset in a step, `uniform(step, asset, side)` the uniform of a watched extreme
-        inside it, side 'low' or 'high'.
+        `normal(step, k)` is the normal of the k-th moving asset in a step, `uniform(step, asset, side)` the uniform of
+        a watched extreme inside it, side 'low' or 'high'.
         """
         walk, levels, logs = Walk(self.dated, self.market), self.spots, dict(self.starts)
         walk.result.life = max((day.time for moment in self.dated.moments for event in moment.events

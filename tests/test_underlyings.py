@@ -31,7 +31,8 @@ def market(asset: str, more: str = "", rates: str = "{EUR: 4%, USD: 2%}", curren
     return f"---\nmarket: 0y\nrates: {rates}\nassets:\n  harbour: {{spot: 100, currency: {currency}, {asset}}}\n{more}"
 
 
-def option(asset: str, more: str = "", expiry: str = "1y", strike: float = 100, side: str = "call", **others: str) -> str:
+def option(asset: str, more: str = "", expiry: str = "1y", strike: float = 100, side: str = "call",
+           **others: str) -> str:
     """A European option under a market."""
     contract = document("european", side=side, strike=strike, expiry=expiry)
     head, _, terms = contract.partition("payoff: ")
@@ -147,7 +148,7 @@ def _asked(text: str) -> tuple[Market, object]:
 
 
 def test_a_blend_keeps_the_forwards():
-    """Cash that becomes a share moves no forward, at any date; wholly a share, the option is Black's at that forward."""
+    """Cash that becomes a share moves no forward, at any date; wholly a share, the option is Black's at it."""
     asset = "dividends: [{ex: 0.5y, cash: 2}, {ex: 1.5y, cash: 3}, {ex: 2.5y, cash: 4}], vol: 20%"
     blended = asset + ", dividend_blend: {cash_until: 1y, share_from: 2y}"
     plain, mixed = (MarketMap(*_asked(option(each, expiry="3y")), 3.0) for each in (asset, blended))
@@ -173,7 +174,8 @@ def test_a_decrement_in_points():
 def test_dividends_worth_the_spot_are_an_error():
     """At the asset, with both numbers; a blend that would take more than all of the level does not hide it."""
     for more in ("", ", dividend_blend: {cash_until: 0.1y, share_from: 0.2y}"):
-        made = MarketMap(*_asked(option("dividends: [{ex: 0.25y, cash: 60}, {ex: 0.75y, cash: 50}], vol: 20%" + more)), 1.0)
+        asset = "dividends: [{ex: 0.25y, cash: 60}, {ex: 0.75y, cash: 50}], vol: 20%"
+        made = MarketMap(*_asked(option(asset + more)), 1.0)
         (fault,) = made.faults()
         assert "cash dividends of 'harbour'" in fault.text and "its spot is 100" in fault.text
 
@@ -199,7 +201,7 @@ def test_quanto(fx: str, sign: int):
 
 def test_quanto_with_cash_dividends():
     """The lognormal part drifts under the payment currency's measure, dividends are valued under the asset's own."""
-    asset = f"dividends: [{{ex: 0.5y, cash: 3}}], vol: 20%, quanto: {{fx_vol: 10%, fx_correlation: 50%, fx: EUR per USD}}"
+    asset = "dividends: [{ex: 0.5y, cash: 3}], vol: 20%, quanto: {fx_vol: 10%, fx_correlation: 50%, fx: EUR per USD}"
     text = option(asset, contract="conversion: {harbour: quanto}\n", currency="USD")
     check(priced(text), black(stripped((0.5, 3), growth=0.02) * exp(0.02 - 0.01), 100, 0.04))
 
@@ -223,8 +225,8 @@ def test_composite(name: str, spot: float, correlation: int):
 
 
 def test_composite_with_cash_dividends():
-    """Looked at while a dividend is to come, the level is the lognormal part plus its value, times the rate of exchange:
-    a digital by quadrature over the rate."""
+    """Looked at while a dividend is to come, the level is the lognormal part plus its value, times the rate of
+    exchange: a digital by quadrature over the rate."""
     text = f"""
 payoff: looks_twice
 about: Looks early and late.

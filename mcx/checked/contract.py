@@ -95,8 +95,8 @@ def place_of(value: TermValue, position: int) -> Place:
 class BusinessDays:
     """Which days are good and how others roll ('following', 'modified following', 'preceding').
 
-    `holidays` are names of financial calendars, or 'none' alone for weekends only, each with its place in `places`; a day
-    is good if all of them are open, or any with `in_any`. `extra` are holidays that the contract lists itself.
+    `holidays` are names of financial calendars, or 'none' alone for weekends only, each with its place in `places`; a
+    day is good if all of them are open, or any with `in_any`. `extra` are holidays that the contract lists itself.
     """
 
     holidays: tuple[str, ...]

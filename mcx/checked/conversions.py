@@ -64,8 +64,8 @@ def conversion_faults(
             if found.get(name) or not (node is not None and (not isinstance(node, Mapping) or name in node)):
                 faults += _needs(asset, found.get(name), title, currency, market, fx_stated)
         elif name in stated:
-            faults.append(Fault(node.key(name).place, f"'{name}' is quoted in {currency}, the contract's currency: there "
-                                                      "is nothing to convert"))
+            faults.append(Fault(node.key(name).place, f"'{name}' is quoted in {currency}, the contract's currency: "
+                                                      "there is nothing to convert"))
     return faults
 
 
@@ -80,8 +80,8 @@ def _needs(
     name, own = asset.name, asset.currency
     if how is None:
         return [Fault(asset.place, f"'{name}' is quoted in {own}, but '{title}' pays in {paid}; write in the contract "
-                                   f"'conversion: {{{name}: quanto}}' (paid at a fixed rate) or '{{{name}: composite}}' "
-                                   "(converted at the rate of the day)")]
+                                   f"'conversion: {{{name}: quanto}}' (paid at a fixed rate) or '{{{name}: "
+                                   f"composite}}' (converted at the rate of the day)")]
     if own not in market.rates and (asset.forwards is None or how == "composite") and market.rates:
         return [Fault(asset.place, f"the market has no rates for '{own}', the currency of '{name}'")]
     if how == "composite":
@@ -90,8 +90,8 @@ def _needs(
                                        f"exchange; write 'fx: {{{paid} per {own}: {{spot: ..., vol: ...}}}}'")]
         return []
     if asset.quanto is None:
-        return [Fault(asset.place, f"'{name}' is paid in {paid} at a fixed rate; its market needs 'quanto: {{fx_vol: ..., "
-                                   f"fx_correlation: ..., fx: {paid} per {own}}}'")]
+        return [Fault(asset.place, f"'{name}' is paid in {paid} at a fixed rate; its market needs 'quanto: {{fx_vol: "
+                                   f"..., fx_correlation: ..., fx: {paid} per {own}}}'")]
     if set(asset.quanto.per) != {own, paid}:
         return [Fault(asset.quanto.place, f"the quanto of '{name}' is about {' per '.join(asset.quanto.per)}; expected "
                                           f"'{paid} per {own}' or '{own} per {paid}'")]

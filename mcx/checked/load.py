@@ -225,7 +225,8 @@ def correlations_known(pair: Pair) -> list[Fault]:
     if pairs is None or len(known) < 2:
         return []
     stated = [tuple(part.strip() for part in each.split("/")) for each in pairs]
-    if any(len(names) != 2 or not set(names) <= {*pair.stated("assets"), *(pair.stated("fx") or ())} for names in stated):
+    named = {*pair.stated("assets"), *(pair.stated("fx") or ())}
+    if any(len(names) != 2 or not set(names) <= named for names in stated):
         return []  # a pair that was misspelt is not missing as well
     place = _place(pair.market_body, "correlation" if "correlation" in pair.market_body else "market")
     missing = [f"{a}/{b}" for a, b in combinations(known, 2) if (a, b) not in stated and (b, a) not in stated]

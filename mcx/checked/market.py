@@ -21,7 +21,8 @@ class Quoted:
 
 @dataclass(frozen=True, slots=True)
 class Node:
-    """A point of a curve: years from the valuation date (Actual/365 Fixed), the tenor or date as written, the number."""
+    """A point of a curve: years from the valuation date (Actual/365 Fixed), the tenor or date as written, the
+    number."""
 
     time: float
     label: str
@@ -88,8 +89,8 @@ class Decrement:
 
 @dataclass(frozen=True, slots=True)
 class Quanto:
-    """What a payment at a fixed rate of exchange needs: the vol of the rate and its correlation with the asset; the rate
-    is quoted as units of `per[0]` for one unit of `per[1]`."""
+    """What a payment at a fixed rate of exchange needs: the vol of the rate and its correlation with the asset; the
+    rate is quoted as units of `per[0]` for one unit of `per[1]`."""
 
     fx_vol: Curve
     fx_correlation: Quoted

@@ -1,8 +1,9 @@
 """From a `market:` document to a `Market`: everything observed on the valuation date, each number as it was
 stated.
 
-Curves and single numbers are read in `curves.py`, assets and rates of exchange in `read_underlyings.py`. What needs a contract to be judged (is every asset there,
-does the correlation matrix hold) is checked in `load.py`.
+Curves and single numbers are read in `curves.py`, assets and rates of exchange in
+`read_underlyings.py`. What needs a contract to be judged (is every asset there, does the correlation matrix
+hold) is checked in `load.py`.
 """
 
 from __future__ import annotations
@@ -36,7 +37,8 @@ def read_market(document: Document) -> tuple[Market, list[Fault]]:
     funding = _by_currency(reader, body.get("funding"), "funding spreads by currency, as '{EUR: 80 bp}'")
     named = mapping_of(body.get("assets"), faults, "assets by name") or Mapping((), body.place)
     assets = _each(named, lambda name, node: read_asset(reader, name, node))
-    rates_of_exchange = mapping_of(body.get("fx"), faults, "rates of exchange, as '{EUR per USD: {spot: ..., vol: ...}}'")
+    rates_of_exchange = mapping_of(body.get("fx"), faults,
+                                   "rates of exchange, as '{EUR per USD: {spot: ..., vol: ...}}'")
     fx = _each(rates_of_exchange or Mapping((), body.place), lambda name, node: read_fx(reader, name, node))
     if "assets" in body and not named.entries:
         faults.append(expected("assets by name", body.get("assets"), "there is none"))

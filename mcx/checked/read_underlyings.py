@@ -45,8 +45,10 @@ def read_asset(reader: MarketReader, name: Scalar, node: Node) -> AssetMarket | 
     quanto = _quanto(reader, node.get("quanto"), currency) if "quanto" in node else None
     if len(faults) > before:
         return None
-    return AssetMarket(name.text, spot, currency, curves["vol"], name.place, curves.get("yield"), curves.get("forwards"),
-                       dividends, blend, kind == "total return", decrement, quanto)
+    return AssetMarket(
+        name.text, spot, currency, curves["vol"], name.place, dividend_yield=curves.get("yield"),
+        forwards=curves.get("forwards"), dividends=dividends, blend=blend, total_return=kind == "total return",
+        decrement=decrement, quanto=quanto)
 
 
 def read_fx(reader: MarketReader, name: Scalar, node: Node) -> FxMarket | None:
@@ -65,8 +67,8 @@ def read_fx(reader: MarketReader, name: Scalar, node: Node) -> FxMarket | None:
 def _check_what_is_given_up(node: Mapping, total_return: bool, faults: list[Fault], what: str) -> None:
     """Exactly one way to say it; a decrement belongs to a total-return index."""
     if total_return:
-        faults += [Fault(node.key(key).place, f"'{key}' counts twice: {what} is a total-return index, whose level keeps "
-                                              "its dividends") for key in GIVEN_UP if key in node]
+        faults += [Fault(node.key(key).place, f"'{key}' counts twice: {what} is a total-return index, whose level "
+                                              "keeps its dividends") for key in GIVEN_UP if key in node]
     else:
         if "decrement" in node:
             faults.append(Fault(node.key("decrement").place, "a decrement is taken from a total-return index; write "
@@ -92,7 +94,8 @@ def _dividends(reader: MarketReader, node: Node | None) -> tuple[Dividend, ...]:
             continue
         one = _dividend(reader, item)
         if one is not None and one.time in found:
-            reader.faults.append(Fault(one.place, f"a second dividend on {one.label}; one may have both cash and share"))
+            reader.faults.append(Fault(one.place, f"a second dividend on {one.label}; one may have both cash and "
+                                                  "share"))
         elif one is not None:
             found[one.time] = one
     return tuple(found[when] for when in sorted(found))

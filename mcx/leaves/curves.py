@@ -1,8 +1,8 @@
 """Curves of rates, spreads, yields and forwards, as logs that are linear between their points.
 
-A zero rate r to time t is the log -r t of a discount factor, if it is continuously compounded; funding spreads and yields are read by the same rule, and
-forwards are the log of the forward over the spot. Every curve starts at (0, 0), is linear in the log between points,
-and keeps its last slope beyond them: a flat forward rate.
+A zero rate r to time t is the log -r t of a discount factor, if it is continuously compounded; funding spreads and
+yields are read by the same rule, and forwards are the log of the forward over the spot. Every curve starts at (0, 0),
+is linear in the log between points, and keeps its last slope beyond them: a flat forward rate.
 """
 
 from __future__ import annotations

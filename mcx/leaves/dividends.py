@@ -1,9 +1,9 @@
 """What dividends do to a level: shares by which it falls, and cash that is escrowed.
 
-A dividend that is a share of the level multiplies it at its ex date and belongs to the asset's growth. Cash is escrowed:
-today's value of the cash dividends whose ex dates fall up to the contract's last observation, discounted at the asset's
-own growth, is taken out of the spot; what is left is lognormal with the asset's vol, and the level is that plus the
-value of the dividends still to come. Forwards do not depend on where the last observation lies.
+A dividend that is a share of the level multiplies it at its ex date and belongs to the asset's growth. Cash is
+escrowed: today's value of the cash dividends whose ex dates fall up to the contract's last observation, discounted at
+the asset's own growth, is taken out of the spot; what is left is lognormal with the asset's vol, and the level is that
+plus the value of the dividends still to come. Forwards do not depend on where the last observation lies.
 """
 
 from __future__ import annotations

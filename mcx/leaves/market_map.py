@@ -32,8 +32,9 @@ SOON = 1e-6  # years: before any node
 
 @dataclass(frozen=True, slots=True)
 class Exchange:
-    """How an asset of another currency meets the rate of exchange (units of the contract's currency for one of its own):
-    the rate's vol, its correlation with the asset, and its number among what is simulated, None where it is fixed."""
+    """How an asset of another currency meets the rate of exchange (units of the contract's currency for one of its
+    own): the rate's vol, its correlation with the asset, and its number among what is simulated, None where it is
+    fixed."""
 
     vol: VolCurve
     correlation: float
@@ -70,16 +71,18 @@ class MarketMap:
         self._foreign_rates = [log_curve(market.rates[each.per[each.per[0] == contract.currency]])
                                for each in self.rates_of_exchange]
         self._yields = [log_curve(asset.dividend_yield) for asset in self.quotes]
-        self._forwards = [log_curve(asset.forwards, asset.spot.value) if asset.forwards else None for asset in self.quotes]
+        self._forwards = [log_curve(asset.forwards, asset.spot.value) if asset.forwards else None
+                          for asset in self.quotes]
         self._payouts = [self._paid_out(number) for number in range(len(self.quotes))]
-        self._escrows = [Escrow.of(paid, partial(self._own_growth, number)) for number, paid in enumerate(self._payouts)]
+        self._escrows = [Escrow.of(paid, partial(self._own_growth, number))
+                         for number, paid in enumerate(self._payouts)]
         self._stripped = [asset.spot.value - escrow.after(0.0)
                           for asset, escrow in zip(self.quotes, self._escrows, strict=True)]
 
     def faults(self) -> list[Fault]:
         """Cash dividends that are worth as much as the spot or more."""
-        return [Fault(asset.place, f"the cash dividends of '{asset.name}' up to the contract's last observation are worth "
-                                   f"{asset.spot.value - left:.6g} today; its spot is {asset.spot.value:.6g}")
+        return [Fault(asset.place, f"the cash dividends of '{asset.name}' up to the contract's last observation are "
+                                   f"worth {asset.spot.value - left:.6g} today; its spot is {asset.spot.value:.6g}")
                 for asset, left in zip(self.quotes, self._stripped, strict=True) if not left > 0.0]
 
     def nodes(self) -> tuple[float, ...]:
@@ -110,8 +113,8 @@ class MarketMap:
                    if meets and meets.number is not None})
 
     def forward(self, asset: str, time: float) -> float:
-        """The forward of an asset in the contract's currency, at a fixed rate of exchange (quanto) or at that of the day
-        (composite); the spot at time 0."""
+        """The forward of an asset in the contract's currency, at a fixed rate of exchange (quanto) or at that of the
+        day (composite); the spot at time 0."""
         return float(self._forward(self.contract.assets.index(asset), time))
 
     def escrowed(self, asset: int, time: float) -> float:
@@ -210,7 +213,7 @@ class MarketMap:
         return rate.spot.value ** self._sign(rate.per)
 
     def _fx_growth(self, number: int, time: float) -> float:
-        """The log of the forward over the spot of a rate of exchange: by the difference of the two currencies' rates."""
+        """The log of the forward over the spot of a rate of exchange, by the difference of both currencies' rates."""
         return self._foreign_rates[number - len(self.quotes)].log(time) - self._rates.log(time)
 
     def _base_growth(self, asset: int, time: float) -> float:

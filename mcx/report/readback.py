@@ -28,6 +28,7 @@ from mcx.report.results import (
 from mcx.report.settled import Settled, right_sides
 from mcx.report.underlyings import underlyings
 from mcx.report.wording import Words, days, figure, joined, period
+from mcx.tape.steps import PLAIN
 from mcx.tape.unroll import Unrolled, unroll
 
 HOW = {"average": "the average of {}", "total": "the sum of {}", "product": "the product of {}",
@@ -46,7 +47,8 @@ def readback(dated: DatedContract, market: Market | None, path: PathResult | Non
     contract = dated.contract
     words, settled = Words(dated), Settled(contract)
     market_map = MarketMap.of(market, dated) if market else None
-    unrolled = unroll(dated, nodes=market_map.nodes(), makeup=market_map.makeup()) if market_map else unroll(dated, nodes=())
+    nodes, makeup = (market_map.nodes(), market_map.makeup()) if market_map else ((), PLAIN)
+    unrolled = unroll(dated, nodes=nodes, makeup=makeup)
     return Readback(
         contract=contract.title,
         payoff=contract.payoff.name,
@@ -74,7 +76,8 @@ def _facts(dated: DatedContract) -> Iterator[Sentence]:
         yield Sentence("units", f"{figure(contract.units)}; amounts are {contract.currency} for each unit")
     yield Sentence("assets", joined(contract.assets))
     if contract.conversion:
-        yield Sentence("conversion", "; ".join(f"{name}: {CONVERSIONS[how]}" for name, how in contract.conversion.items()))
+        said = (f"{name}: {CONVERSIONS[how]}" for name, how in contract.conversion.items())
+        yield Sentence("conversion", "; ".join(said))
     if contract.start is not None:
         yield Sentence("start", str(dated.start))
     if contract.day_count:

@@ -21,7 +21,8 @@ def underlyings(dated: DatedContract, market: MarketMap) -> Iterator[str]:
         yield from _given_up(asset)
         if number in market.makeup().cash:
             worth = asset.spot.value - market.stripped(number)
-            yield ESCROWED.format(name=asset.name, last=day_of(market.last, dated), worth=f"{worth:.6g}", spot=figure(asset.spot.value))
+            yield ESCROWED.format(name=asset.name, last=day_of(market.last, dated), worth=f"{worth:.6g}",
+                                  spot=figure(asset.spot.value))
         yield from _converted(asset, market)
 
 
@@ -31,17 +32,18 @@ def _given_up(asset: AssetMarket) -> Iterator[str]:
     if asset.total_return and decrement is None:
         yield f"{name} is a total-return index: its level keeps all dividends"
     elif decrement is not None and decrement.points:
-        yield (f"{name} gives up {figure(decrement.quoted.value)} points a year, taken as a cash dividend of a 365th of "
-               "that on every calendar day")
+        yield (f"{name} gives up {figure(decrement.quoted.value)} points a year, taken as a cash dividend of a 365th "
+               "of that on every calendar day")
     elif decrement is not None:
         yield f"{name} gives up {figure(decrement.quoted.value, 'percent')} a year, taken as a continuous yield"
     gone = [each for each in asset.dividends if each.time <= 0.0]
     if gone:
-        yield f"the spot of {name} is without its dividend{'s' * (len(gone) > 1)} up to the valuation date, the last on " \
-              f"{gone[-1].label}"
+        dividends = "dividends" if len(gone) > 1 else "dividend"
+        yield (f"the spot of {name} is without its {dividends} up to the valuation date, the last on "
+               f"{gone[-1].label}")
     if asset.blend is not None:
-        yield (f"cash dividends of {name} turn into shares of its level over the time that its blend states, each by the "
-               "forward just before it, so that forwards stay as they are with cash")
+        yield (f"cash dividends of {name} turn into shares of its level over the time that its blend states, each by "
+               "the forward just before it, so that forwards stay as they are with cash")
 
 
 def _converted(asset: AssetMarket, market: MarketMap) -> Iterator[str]:
@@ -54,5 +56,5 @@ def _converted(asset: AssetMarket, market: MarketMap) -> Iterator[str]:
                f"correlation of {stated} with {' per '.join(asset.quanto.per)} and the vols of both")
     elif how == "composite":
         rate = market.market.fx_between(own, paid)
-        yield (f"{asset.name} is quoted in {own} and converted to {paid} at the rate of each date (composite), which is "
-               f"simulated too, from {figure(rate.spot.value)} {rate.name}")
+        yield (f"{asset.name} is quoted in {own} and converted to {paid} at the rate of each date (composite), which "
+               f"is simulated too, from {figure(rate.spot.value)} {rate.name}")

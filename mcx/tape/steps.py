@@ -33,9 +33,9 @@ class Grid:
 class Makeup:
     """How levels are made of the lognormal values that are simulated.
 
-    `cash`: assets with cash dividends to come, whose level is the simulated part plus the escrow. `ex`: assets and times
-    at which a dividend takes a share of the level. `rates`: for each asset that is converted at the rate of exchange of
-    the day the number of that rate; rates have numbers after those of the assets.
+    `cash`: assets with cash dividends to come, whose level is the simulated part plus the escrow. `ex`: assets and
+    times at which a dividend takes a share of the level. `rates`: for each asset that is converted at the rate of
+    exchange of the day the number of that rate; rates have numbers after those of the assets.
     """
 
     cash: frozenset[int] = frozenset()
@@ -185,7 +185,8 @@ class _Walk:
         variance = self.builder.leaf(Leaf(LeafKind.VARIANCE, asset, self.makeup.rates.get(asset, -1), **self._span()))
         before, after = (self._converted_log(asset, number) for number in (self.reached - 1, self.reached))
         if (asset, self.reached) in self.ex:  # the bridge ends before the dividend
-            after = self.builder.emit(Op.SUB, after, self.builder.leaf(Leaf(LeafKind.JUMP, asset, end=self._span()["end"])))
+            jump = self.builder.leaf(Leaf(LeafKind.JUMP, asset, end=self.times[self.reached]))
+            after = self.builder.emit(Op.SUB, after, jump)
         bridge = Op.BRIDGE_LOW if op is Op.LOW else Op.BRIDGE_HIGH
         return self.builder.emit(bridge, before, after, variance, uniform)
 

@@ -24,8 +24,8 @@ from mcx.tape.running import Observed, Watched
 from mcx.tape.steps import PLAIN, Grid, Makeup, expand_levels
 from mcx.tape.watching import conflicts
 
-UNKNOWN_SUM = ("an asset with cash dividends that is converted at the rate of the day cannot be watched continuously: its "
-               "law between two dates is not known; name the dates on which it is watched")
+UNKNOWN_SUM = ("an asset with cash dividends that is converted at the rate of the day cannot be watched continuously: "
+               "its law between two dates is not known; name the dates on which it is watched")
 
 
 @dataclass(frozen=True, slots=True)
@@ -61,8 +61,8 @@ class Unrolled:
 
 
 def unroll(dated: DatedContract, *, nodes: Sequence[float], makeup: Makeup = PLAIN) -> Unrolled:
-    """The tape of a contract; `nodes` are the times of the market's curve points (`MarketMap.nodes`), `makeup` how levels
-    come about (`MarketMap.makeup`)."""
+    """The tape of a contract; `nodes` are the times of the market's curve points (`MarketMap.nodes`), `makeup` how
+    levels come about (`MarketMap.makeup`)."""
     walk = _Walk(dated)
     walk.run()
     observed = drop_dead_code(walk.builder.tape(walk.ledger.outputs()))

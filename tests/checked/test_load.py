@@ -208,8 +208,8 @@ def test_currency_of_the_asset():
     assert made(quanto, market)[1] == ["b.yaml:6:3: 'quarry' is paid in EUR at a fixed rate; its market needs 'quanto: "
                                        "{fx_vol: ..., fx_correlation: ..., fx: EUR per USD}'"]
     composite = quanto.replace("quanto", "composite")
-    assert made(composite, market)[1] == ["b.yaml:6:3: 'quarry' is converted from USD to EUR, but the market has no rate "
-                                          "of exchange; write 'fx: {EUR per USD: {spot: ..., vol: ...}}'"]
+    assert made(composite, market)[1] == ["b.yaml:6:3: 'quarry' is converted from USD to EUR, but the market has no "
+                                          "rate of exchange; write 'fx: {EUR per USD: {spot: ..., vol: ...}}'"]
     market = market.replace("correlation:", "fx: {USD per EUR: {spot: 1.1, vol: 8%}}\ncorrelation:")
     assert made(composite, market)[1] == ["b.yaml:9:14: no correlation for 'harbour/USD per EUR', 'quarry/USD per EUR' "
                                           "and 'orchard/USD per EUR'"]

@@ -214,9 +214,11 @@ SLIPS = [
 def test_what_a_level_gives_up():
     """Dividends stand in order of time with those of the past; a decrement is a share or points a year; a rate of
     exchange keeps its direction."""
-    market, faults = parsed(WHOLE.replace("yield: 2.4%, ", "dividends: [{ex: 2028-05-02, share: 1.5%}, {ex: 2026-12-01, "
-                                          "cash: 4, share: 1%}], dividend_blend: {cash_until: 2026-06-01, share_from: 3y}, ")
-                            .replace("forwards: {1y: 805, 2028-12-01: 810}", "underlying: total return, decrement: 50 points")
+    market, faults = parsed(WHOLE.replace("yield: 2.4%, ", "dividends: [{ex: 2028-05-02, share: 1.5%}, {ex: "
+                                          "2026-12-01, cash: 4, share: 1%}], dividend_blend: {cash_until: 2026-06-01, "
+                                          "share_from: 3y}, ")
+                            .replace("forwards: {1y: 805, 2028-12-01: 810}",
+                                     "underlying: total return, decrement: 50 points")
                             + "fx: {EUR per USD: {spot: 0.9, vol: 8%}}\n")
     assert faults == []
     harbour, lantern = market.assets["harbour"], market.assets["lantern"]

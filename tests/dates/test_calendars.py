@@ -112,8 +112,9 @@ def test_icma_needs_a_rule():
 
 def test_the_last_period_keeps_the_end_of_february():
     """30E/360 (ISDA) takes the last date of the schedule for the termination date."""
-    contract = CONTRACT.replace("30/360", "30E/360 (ISDA)").replace(CALENDAR, "calendar: {holidays: none, roll: preceding}")
-    contract = contract.replace(RULE, "[2029-02-28, 2029-08-31, 2030-02-28]").replace("2026-11-16", "2028-08-31")
+    contract = CONTRACT.replace(CALENDAR, "calendar: {holidays: none, roll: preceding}")
+    contract = contract.replace("30/360", "30E/360 (ISDA)").replace(RULE, "[2029-02-28, 2029-08-31, 2030-02-28]")
+    contract = contract.replace("2026-11-16", "2028-08-31")
     found, _ = dated(contract=contract, events=PERIOD, valuation=date(2028, 9, 1))
     assert [event.occasion.period for event in events_of(found)] == [180 / 360, 180 / 360, 178 / 360]
 

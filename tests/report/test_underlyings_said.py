@@ -19,8 +19,8 @@ def test_both_verbs_say_it():
     assert "quarry gives up 45 points a year, taken as a cash dividend of a 365th of that on every calendar day" in said
     assert "those with ex dates up to the last observation, 2028-11-30, are worth 12.0768 today" in said
     assert "correlation of -20 % with EUR per USD" in said
-    assert "converted to EUR at the rate of each date (composite), which is simulated too, from 1.064 EUR per CHF" in "\n".join(
-        call.assumptions)
+    converted = "converted to EUR at the rate of each date (composite), which is simulated too, from 1.064 EUR per CHF"
+    assert any(converted in each for each in call.assumptions)
     readbacks = mcx.readback(DEMO).readbacks
     for result, readback in zip((note, call), readbacks, strict=True):
         assert {each for each in result.assumptions if "holidays as listed" not in each} <= set(readback.assumptions)
@@ -64,18 +64,19 @@ def test_dividends_worth_the_spot(tmp_path: Path, verb):
         verb(file)
     (fault,) = caught.value.faults
     line = file.read_text().splitlines().index("  lantern:") + 1
-    assert str(fault).startswith(f"{file}:{line}:3: the cash dividends of 'lantern' up to the contract's last observation "
-                                 "are worth ") and str(fault).endswith("its spot is 801.1")
+    assert str(fault).startswith(f"{file}:{line}:3: the cash dividends of 'lantern' up to the contract's last "
+                                 "observation are worth ") and str(fault).endswith("its spot is 801.1")
 
 
 def test_watches_with_cash_dividends_are_nearly_exact(tmp_path: Path):
     """The readback says so where cash dividends are still to come, and 'exact' without."""
     file = changed(tmp_path, "watched: observations.last", "watched: {continuous: [2026-12-01, observations.last]}")
-    text = file.read_text().replace("[quarry, lantern]", "[lantern]").replace("{quarry: 1012.40, lantern: 804.50}", "804.50")
+    text = file.read_text().replace("[quarry, lantern]", "[lantern]")
+    text = text.replace("{quarry: 1012.40, lantern: 804.50}", "804.50")
     file.write_text(text)
     assert [watch.law for watch in mcx.readback(file).readbacks[0].watches] == ["nearly exact"]
-    plain = text.replace("dividends: [{ex: 2027-05-03, cash: 6.0}, {ex: 2028-05-02, cash: 6.5}, {ex: 2029-05-02, cash: 7.0}]",
-                         "yield: 1%")
+    dividends = "dividends: [{ex: 2027-05-03, cash: 6.0}, {ex: 2028-05-02, cash: 6.5}, {ex: 2029-05-02, cash: 7.0}]"
+    plain = text.replace(dividends, "yield: 1%")
     file.write_text(plain)
     assert plain != text
     assert [watch.law for watch in mcx.readback(file).readbacks[0].watches] == ["exact"]
