@@ -206,6 +206,13 @@ def test_quanto_with_cash_dividends():
     check(priced(text), black(stripped((0.5, 3), growth=0.02) * exp(0.02 - 0.01), 100, 0.04))
 
 
+def test_quanto_on_stated_forwards():
+    """Forwards say the growth in the asset's currency, so that the market needs no rates of it."""
+    asset = "forwards: {1y: 103}, vol: 20%, quanto: {fx_vol: 10%, fx_correlation: -50%, fx: EUR per USD}"
+    text = option(asset, contract="conversion: {harbour: quanto}\n", currency="USD", rates="{EUR: 4%}")
+    check(priced(text), black(103 * exp(0.5 * 0.2 * 0.1), 100, 0.04))
+
+
 def exchange(name: str, spot: float, correlation: int) -> str:
     """The market's lines of a rate of exchange."""
     return f"fx: {{{name}: {{spot: {spot!r}, vol: {FX_VOL}}}}}\ncorrelation: {{harbour/{name}: {correlation}%}}\n"

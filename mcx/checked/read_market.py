@@ -12,7 +12,7 @@ from collections.abc import Callable, Iterable
 from typing import TypeVar
 
 from mcx.checked.curves import MarketReader, correlation, valuation_of
-from mcx.checked.market import Curve, Market, Quoted
+from mcx.checked.market import Curve, FxMarket, Market, Quoted
 from mcx.checked.read_underlyings import read_asset, read_fx
 from mcx.checked.reading import check_keys, mapping_of, text_of, value_of
 from mcx.checked.values import currency_code
@@ -42,6 +42,7 @@ def read_market(document: Document) -> tuple[Market, list[Fault]]:
     fx = _each(rates_of_exchange or Mapping((), body.place), lambda name, node: read_fx(reader, name, node))
     if "assets" in body and not named.entries:
         faults.append(expected("assets by name", body.get("assets"), "there is none"))
+    _check_rates_of_exchange(fx.values(), named, faults)
     market = Market(
         valuation=valuation, rates=rates, funding=funding, assets=assets,
         correlation=_correlations(reader, body.get("correlation"), (*named.keys(), *fx)),
@@ -50,6 +51,18 @@ def read_market(document: Document) -> tuple[Market, list[Fault]]:
         fx=fx,
     )
     return market, faults
+
+
+def _check_rates_of_exchange(rates: Iterable[FxMarket], assets: Mapping, faults: list[Fault]) -> None:
+    """Each pair of currencies once, whichever way it is quoted; no name that an asset has."""
+    first: dict[frozenset[str], FxMarket] = {}
+    for rate in rates:
+        known = first.setdefault(frozenset(rate.per), rate)
+        if known is not rate:
+            text = f"'{rate.name}' is '{known.name}' the other way round, which stands at {known.place}; keep one"
+            faults.append(Fault(rate.place, text))
+        if rate.name in assets:
+            faults.append(Fault(assets.key(rate.name).place, f"'{rate.name}' is the name of a rate of exchange"))
 
 
 def _each(mapping: Mapping, parse: Callable[[Scalar, Node], T | None]) -> dict[str, T]:
