@@ -207,7 +207,7 @@ SLIPS = [
     ("yield: 2.4%, ", "yield: 2.4%, quanto: {fx_vol: 9%, fx_correlation: -20%, fx: GBP per USD}, ",
      "8:102: expected a rate of exchange with EUR, the asset's currency, found 'GBP per USD'"),
     ("source: closing prices", "fx: {EUR per USD: {spot: 0.9, vol: 8%}, USD per EUR: {spot: 1.1, vol: 8%}}",
-     "2:42: 'USD per EUR' is 'EUR per USD' the other way round, which stands at m.yaml:2:6; keep one"),
+     "2:41: 'USD per EUR' is 'EUR per USD' the other way round, which stands at m.yaml:2:6; keep one"),
     ("source: closing prices", "fx: {EUR/USD: {spot: 1.1, vol: 8%}}",
      "2:6: expected a rate of exchange as 'EUR per USD': units of the first for one of the second, found 'EUR/USD'"),
 ]
