@@ -20,7 +20,7 @@ from mcx.dates.dated_contract import DatedContract
 from mcx.faults import Fault
 from mcx.leaves.correlation import correlation_matrix, lower_factor
 from mcx.leaves.curves import log_curve
-from mcx.leaves.dividends import Escrow, Payouts, payouts, pays_cash
+from mcx.leaves.dividends import payouts, pays_cash
 from mcx.leaves.vols import VolCurve, covariance_integral, vol_curve
 from mcx.tape.formulas import figure
 from mcx.tape.program import Leaf, LeafKind
@@ -44,7 +44,8 @@ class Exchange:
 class MarketMap:
     """What a market says about the assets and the currency of one contract. Both are checked already.
 
-    `last` is the last time at which the contract reads a level, which cash dividends need (`MarketMap.of` finds it).
+    `last` is the last time at which the contract reads a level, which forwards need where cash dividends are escrowed
+    (`MarketMap.of` finds it); leaves carry it themselves.
     Beside the assets, numbered in the contract's order, the rates of exchange of composite assets are simulated; they
     have the numbers after them.
     """
@@ -73,21 +74,22 @@ class MarketMap:
         self._yields = [log_curve(asset.dividend_yield) for asset in self.quotes]
         self._forwards = [log_curve(asset.forwards, asset.spot.value) if asset.forwards else None
                           for asset in self.quotes]
-        self._payouts = [self._paid_out(number) for number in range(len(self.quotes))]
-        self._escrows = [Escrow.of(paid, partial(self._own_growth, number))
-                         for number, paid in enumerate(self._payouts)]
-        self._stripped = [asset.spot.value - escrow.after(0.0)
-                          for asset, escrow in zip(self.quotes, self._escrows, strict=True)]
+        self._payouts = [payouts(asset, partial(self._base_growth, number), last)
+                         for number, asset in enumerate(self.quotes)]
 
     def faults(self) -> list[Fault]:
         """Cash dividends that are worth as much as the spot or more."""
-        return [Fault(asset.place, f"the cash dividends of '{asset.name}' up to the contract's last observation are "
-                                   f"worth {asset.spot.value - left:.6g} today; its spot is {asset.spot.value:.6g}")
-                for asset, left in zip(self.quotes, self._stripped, strict=True) if not left > 0.0]
+        found = []
+        for number, asset in enumerate(self.quotes):
+            left = self.stripped(number)
+            if not left > 0.0:
+                found.append(Fault(asset.place, f"the cash dividends of '{asset.name}' up to the contract's last "
+                                                f"observation are worth {asset.spot.value - left:.6g} today; its spot "
+                                                f"is {asset.spot.value:.6g}"))
+        return found
 
     def nodes(self) -> tuple[float, ...]:
-        """The times at which a drift or a vol of what is simulated changes, in years; where cash dividends are still to
-        come also steps between them, because an extreme takes them at their mean over a step."""
+        """The times at which a drift or a vol of what is simulated changes, and ex dates, in years."""
         market, own = self.market, self.contract.currency
         curves = [market.rates.get(asset.currency or own) for asset in self.quotes]
         curves += [curve for asset in self.quotes for curve in (asset.dividend_yield, asset.forwards, asset.vol)]
@@ -97,17 +99,14 @@ class MarketMap:
         curves += [market.rates[own]] if self.rates_of_exchange else []
         times = {node.time for curve in curves if curve for node in curve.nodes}
         for asset, paid in zip(self.quotes, self._payouts, strict=True):
-            times |= set(paid.share_times)
-            if paid.cash_times:
-                often = WEEKLY if asset.decrement else MONTHLY
-                times |= {step / often for step in range(1, math.ceil(paid.cash_times[-1] * often))}
-                times |= set() if asset.decrement else set(paid.cash_times)
+            times |= {*paid.share_times, *(() if asset.decrement else paid.cash_times)}
         return tuple(sorted(time for time in times if time > 0.0))
 
     def makeup(self) -> Makeup:
         """How the tape makes levels of what is simulated."""
         return Makeup(
-            cash=frozenset(number for number, paid in enumerate(self._payouts) if paid.cash_times),
+            cash={number: WEEKLY if self.quotes[number].decrement else MONTHLY
+                  for number, paid in enumerate(self._payouts) if paid.cash_times},
             ex=frozenset((number, when) for number, paid in enumerate(self._payouts) for when in paid.share_times),
             rates={number: meets.number for number, meets in enumerate(self._exchanges)
                    if meets and meets.number is not None})
@@ -117,13 +116,15 @@ class MarketMap:
         day (composite); the spot at time 0."""
         return float(self._forward(self.contract.assets.index(asset), time))
 
-    def escrowed(self, asset: int, time: float) -> float:
-        """What the cash dividends still to come after a time are worth then, in the asset's currency."""
-        return self._escrows[asset].after(time) * np.exp(self._own_growth(asset, time))
+    def escrowed(self, asset: int, time: float, last: float) -> float:
+        """What the cash dividends after a time and up to `last` are worth then, in the asset's currency."""
+        paid = self._payouts[asset]
+        return (paid.cash_to(last) - paid.cash_to(time)) * np.exp(self._own_growth(asset, time))
 
-    def stripped(self, asset: int) -> float:
-        """The spot without the cash dividends to come: what the vol is about."""
-        return self._stripped[asset]
+    def stripped(self, asset: int, last: float | None = None) -> float:
+        """The spot without the cash dividends up to the last observation: what the vol is about."""
+        last = (self.last or 0.0) if last is None else last
+        return self.quotes[asset].spot.value - self._payouts[asset].cash_to(last)
 
     def discount(self, time: float) -> float:
         """The discount factor of the contract's currency, without funding."""
@@ -158,7 +159,8 @@ class MarketMap:
         asset, start, end = leaf.asset, leaf.start, leaf.end
         match leaf.kind:
             case LeafKind.LOG_SPOT:
-                return np.log(self._stripped[asset] if asset < len(self.quotes) else self._fx_spot(asset))
+                rate = asset >= len(self.quotes)
+                return np.log(self._fx_spot(asset) if rate else self.stripped(asset, leaf.last))
             case LeafKind.FORWARD:
                 return self._forward(asset, end)
             case LeafKind.VARIANCE:
@@ -169,11 +171,12 @@ class MarketMap:
             case LeafKind.JUMP:
                 return self._payouts[asset].shares_at(end)
             case LeafKind.ESCROW:
-                return self.escrowed(asset, end)
+                return self.escrowed(asset, end, leaf.last)
             case LeafKind.MEAN_ESCROW:
-                before = self._own_growth(asset, end) - self._payouts[asset].shares_at(end)
-                closing = self._escrows[asset].at_or_after(end) * np.exp(before)
-                return 0.5 * (self.escrowed(asset, start) + closing)
+                paid = self._payouts[asset]
+                before = self._own_growth(asset, end) - paid.shares_at(end)
+                closing = (paid.cash_to(leaf.last) - paid.cash_before(end)) * np.exp(before)
+                return 0.5 * (self.escrowed(asset, start, leaf.last) + closing)
             case LeafKind.DISCOUNT:
                 return self.funded_discount(end)
             case LeafKind.TERM:
@@ -195,17 +198,18 @@ class MarketMap:
         """-1 where a rate of exchange is quoted the other way round than in the contract's currency: its log turns."""
         return 1.0 if per[0] == self.contract.currency else -1.0
 
-    def _paid_out(self, number: int) -> Payouts:
-        asset = self.quotes[number]
-        assert self.last is not None or not pays_cash(asset), "cash dividends need the time of the last observation"
-        return payouts(asset, partial(self._base_growth, number), self.last or 0.0)
-
     def _forward(self, number: int, time: float) -> float:
         meets = self._exchanges[number]
         composite = meets is not None and meets.number is not None
-        growth = self._own_growth if composite else self._growth
-        level = self._stripped[number] * np.exp(growth(number, time)) + self.escrowed(number, time)
-        level = level if time > 0.0 else self.quotes[number].spot.value  # to the last digit
+        if time == 0.0:
+            level = self.quotes[number].spot.value  # to the last digit
+        elif pays_cash(self.quotes[number]):
+            assert self.last is not None, "cash dividends need the time of the last observation"
+            growth = self._own_growth if composite else self._growth
+            level = self.stripped(number) * np.exp(growth(number, time)) + self.escrowed(number, time, self.last)
+        else:
+            growth = self._own_growth if composite else self._growth
+            level = self.quotes[number].spot.value * np.exp(growth(number, time))
         return level * self._fx_spot(meets.number) * np.exp(self._fx_growth(meets.number, time)) if composite else level
 
     def _fx_spot(self, number: int) -> float:

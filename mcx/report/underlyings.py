@@ -19,8 +19,8 @@ def underlyings(dated: DatedContract, market: MarketMap) -> Iterator[str]:
     """Sentences about every asset of a contract, in its order."""
     for number, asset in enumerate(market.quotes):
         yield from _given_up(asset)
-        if number in market.makeup().cash:
-            worth = asset.spot.value - market.stripped(number)
+        worth = asset.spot.value - market.stripped(number)
+        if worth > 0.0:
             yield ESCROWED.format(name=asset.name, last=day_of(market.last, dated), worth=f"{worth:.6g}",
                                   spot=figure(asset.spot.value))
         yield from _converted(asset, market)

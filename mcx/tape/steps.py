@@ -8,6 +8,7 @@ of variance to be constant within a step.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 
@@ -33,12 +34,13 @@ class Grid:
 class Makeup:
     """How levels are made of the lognormal values that are simulated.
 
-    `cash`: assets with cash dividends to come, whose level is the simulated part plus the escrow. `ex`: assets and
+    `cash`: assets with cash dividends to come, whose level is the simulated part plus the escrow, and into how many
+    steps a year a watched stretch of theirs is divided at least, since the escrow enters at its mean. `ex`: assets and
     times at which a dividend takes a share of the level. `rates`: for each asset that is converted at the rate of
     exchange of the day the number of that rate; rates have numbers after those of the assets.
     """
 
-    cash: frozenset[int] = frozenset()
+    cash: Mapping[int, int] = field(default_factory=dict)
     ex: frozenset[tuple[int, float]] = frozenset()
     rates: Mapping[int, int] = field(default_factory=dict)
 
@@ -85,6 +87,12 @@ def grid_times(read: Iterable[LevelKey], watched: Iterable[LevelKey], nodes: Ite
     return sorted({*times, *inside})
 
 
+def _between(watched: Iterable[LevelKey], often: Mapping[int, int]) -> set[float]:
+    """Times inside the watched stretches of assets with cash dividends, as many a year as these need."""
+    return {step / count for key in watched if (count := often.get(key.asset))
+            for step in range(math.ceil(key.start * count), math.floor(key.time * count) + 1)}
+
+
 class _Walk:
     """The logs of the assets, moved along the grid as the tape asks for later and later dates."""
 
@@ -92,7 +100,8 @@ class _Walk:
         self.makeup = makeup
         levels = [step.payload for step in tape.instructions if step.op is Op.LEVEL]
         extremes = {(step.op, step.payload): None for step in tape.instructions if step.op in (Op.LOW, Op.HIGH)}
-        self.times = grid_times(levels, (key for _, key in extremes), nodes)
+        watched = [key for _, key in extremes]
+        self.times = grid_times(levels, watched, {*nodes, *_between(watched, makeup.cash)})
         self._number = {time: number for number, time in enumerate(self.times)}
         moving = {key.asset for key in levels if self.number(key.time)} | {key.asset for _, key in extremes}
         self.assets = sorted(moving | {makeup.rates[asset] for asset in moving & set(makeup.rates)})
@@ -131,7 +140,7 @@ class _Walk:
         emit = self.builder.emit
         if asset not in self.makeup.cash:
             return emit(Op.EXP, self._converted_log(asset, number), place=place)
-        escrow = self.builder.leaf(Leaf(LeafKind.ESCROW, asset, end=self.times[number]))
+        escrow = self.builder.leaf(Leaf(LeafKind.ESCROW, asset, end=self.times[number], last=self.times[-1]))
         level = emit(Op.ADD, emit(Op.EXP, self.log(asset, number), place=place), escrow, place=place)
         if asset not in self.makeup.rates:
             return level
@@ -150,7 +159,8 @@ class _Walk:
 
     def log(self, asset: int, number: int) -> int:
         if (asset, number) not in self.logs and number == 0:
-            self.logs[asset, 0] = self.builder.leaf(Leaf(LeafKind.LOG_SPOT, asset=asset))
+            last = self.times[-1] if asset in self.makeup.cash else 0.0
+            self.logs[asset, 0] = self.builder.leaf(Leaf(LeafKind.LOG_SPOT, asset=asset, last=last))
         return self.logs[asset, number]
 
     def advance(self, number: int) -> None:
@@ -196,7 +206,7 @@ class _Walk:
         emit, joined = self.builder.emit, Op.MIN if op is Op.LOW else Op.MAX
         bridge = self._bridge(op, asset)
         if asset in self.makeup.cash:
-            mean = self.builder.leaf(Leaf(LeafKind.MEAN_ESCROW, asset, **self._span()))
+            mean = self.builder.leaf(Leaf(LeafKind.MEAN_ESCROW, asset, **self._span(), last=self.times[-1]))
             ends = (self._level(asset, number) for number in (self.reached - 1, self.reached))
             return self.builder.fold(joined, (emit(Op.ADD, emit(Op.EXP, bridge), mean), *ends))
         if (asset, self.reached) in self.ex:

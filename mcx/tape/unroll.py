@@ -85,7 +85,7 @@ def last_read(dated: DatedContract) -> float:
 def _unknown_laws(tape: Tape, makeup: Makeup) -> list[Fault]:
     """Continuous watches of an asset with cash dividends that is converted at the rate of the day."""
     return sorted({Fault(step.place, UNKNOWN_SUM) for step in tape.instructions
-                   if step.op in (Op.LOW, Op.HIGH) and step.payload.asset in makeup.cash & set(makeup.rates)})
+                   if step.op in (Op.LOW, Op.HIGH) and step.payload.asset in set(makeup.cash) & set(makeup.rates)})
 
 
 def _with_last_levels(tape: Tape, assets: Sequence[str]) -> tuple[Tape, dict[str, tuple[int, float]]]:
