@@ -30,6 +30,7 @@ from mcx.tape.unroll import last_read
 MONTHLY, WEEKLY = 12, 52
 SOON = 1e-6  # years: before any node
 
+
 @dataclass(frozen=True, slots=True)
 class Exchange:
     """How an asset of another currency meets the rate of exchange (units of the contract's currency for one of its
@@ -45,9 +46,8 @@ class MarketMap:
     """What a market says about the assets and the currency of one contract. Both are checked already.
 
     `last` is the last time at which the contract reads a level, which forwards need where cash dividends are escrowed
-    (`MarketMap.of` finds it); leaves carry it themselves.
-    Beside the assets, numbered in the contract's order, the rates of exchange of composite assets are simulated; they
-    have the numbers after them.
+    (`MarketMap.of` finds it); leaves carry it themselves. Beside the assets, numbered in the contract's order, the rates
+    of exchange of composite assets are simulated; they have the numbers after them.
     """
 
     @classmethod
