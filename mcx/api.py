@@ -8,7 +8,8 @@ after the documents are known to be sound.
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
+from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -21,8 +22,10 @@ from mcx.text.located import Document
 
 if TYPE_CHECKING:
     from mcx.checked.market import Market
+    from mcx.estimators.greeks import Wish
     from mcx.estimators.plan import Precision
     from mcx.estimators.price import Ready
+    from mcx.report.greek_results import GreeksResult, GreeksTable
     from mcx.report.results import Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay
 
 File = str | Path
@@ -69,8 +72,63 @@ def price(
     if record is not None and not table.interrupted:
         from mcx.report.record import make_record, write_record
 
-        write_record(record, make_record(_sources(made), [each.to_dict() for each in table.prices]))
+        write_record(record, make_record(_sources(made), "price", [each.to_dict() for each in table.prices]))
     return table.prices[0] if len(made.contracts) == 1 else table
+
+
+def greeks(
+    *files: File,
+    estimator: str = "auto",
+    bump: str | float | None = None,
+    assets: Sequence[str] = (),
+    spot_moves: Sequence[str | float] = (),
+    vol_moves: Sequence[str | float] = (),
+    paths: int | None = None,
+    within: str | float | None = None,
+    seconds: float | None = None,
+    seed: int | None = None,
+    threads: int | None = None,
+    reduction: str = "none",
+    record: File | None = None,
+    progress: Progress | None = None,
+    notice: Callable[[str], None] | None = None,
+) -> GreeksResult | GreeksTable:
+    """How the value of every contract in the files moves with the market in them: one result, or a table of several.
+
+    `estimator` is 'auto', 'pathwise', 'likelihood' or 'mixed'. `bump` (0.01 or '1%') adds a revaluation on the same
+    random numbers for comparison: spots and forwards moved by that share, vols and correlations by that much, rates,
+    yields and funding by a tenth of it. `assets` limits the sensitivities, and what moves, to some assets. `spot_moves`
+    asks for a ladder of moves of all spots together, `vol_moves` for a grid of both. The other arguments
+    are those of `price`; `within` is about the price. Raises InputError, RequestError, Refusal.
+    """
+    from mcx.estimators.batches import check_paths
+    from mcx.estimators.greeks import Wish
+    from mcx.estimators.plan import DEFAULT_SEED, check_fits, precision
+    from mcx.estimators.wishes import bump_of, estimator_of, moves_of
+
+    asked = precision(paths, within, seconds)
+    check_paths(asked.paths)
+    wish = Wish(estimator_of(estimator), bump_of(bump), tuple(assets), moves_of(spot_moves, "spot"),
+                moves_of(vol_moves, "vol"))
+    seed = DEFAULT_SEED if seed is None else _seed(seed)
+    threads = _threads(threads)
+    _reduction(reduction)
+    if record is not None:
+        from mcx.report.record import check_free
+
+        check_free(record)
+    made, dated = _dated(files, with_market=True)
+    for each in made.contracts:
+        check_fits(asked, notional=each.notional is not None, title=each.title)
+        for name in wish.assets:
+            if name not in each.assets:
+                raise RequestError(f"'{each.title}' has no asset '{name}'{did_you_mean(name, each.assets)}")
+    table = _greeks(made, dated, [wish] * len(dated), [asked] * len(dated), [seed] * len(dated), threads, progress, notice)
+    if record is not None:
+        from mcx.report.record import make_record, write_record
+
+        write_record(record, make_record(_sources(made), "greeks", [each.to_dict() for each in table.contracts]))
+    return table.contracts[0] if len(made.contracts) == 1 else table
 
 
 def readback(*files: File, path: File | None = None) -> Readback | ReadbackTable:
@@ -149,10 +207,19 @@ def replay(
     if made.market is None or len(runs) != len(dated):
         raise RequestError(f"{file}: the record has {len(runs)} requests for the {len(dated)} contracts in its inputs")
     asked = [precision(each["paths"], None, None) for each in runs]
-    table = _price(made, dated, asked, [_seed(each["seed"]) for each in runs], threads, progress, notice)
-    if table.interrupted:
-        raise KeyboardInterrupt
-    return compare(stored, [each.to_dict() for each in table.prices], environment())
+    seeds = [_seed(each["seed"]) for each in runs]
+    if stored.get("verb", "price") == "greeks":
+        from mcx.estimators.greeks import Wish
+
+        wishes = [Wish(each["estimator"], each["bump"], *(tuple(each[key]) for key in ("assets", "spot_moves", "vol_moves")))
+                  for each in runs]
+        results = _greeks(made, dated, wishes, asked, seeds, threads, progress, notice).contracts
+    else:
+        table = _price(made, dated, asked, seeds, threads, progress, notice)
+        if table.interrupted:
+            raise KeyboardInterrupt
+        results = table.prices
+    return compare(stored, [each.to_dict() for each in results], environment())
 
 
 def _dated(files: Sequence[File], *, with_market: bool) -> tuple[Request, list[DatedContract]]:
@@ -213,19 +280,14 @@ def _price(
 ) -> PriceTable:
     """Every contract valued; after an interruption those so far. Raises KeyboardInterrupt if that is none."""
     from mcx.estimators.price import value
-    from mcx.machine.run import NonFinitePath
     from mcx.report.results import PriceTable
     from mcx.report.summary import price_result
 
     results = []
     for ready, wish, seed in zip(_ready(made, dated), asked, seeds, strict=True):
         try:
-            valuation = value(ready, wish, seed=seed, threads=threads, progress=progress, notice=notice)
-        except NonFinitePath as trouble:
-            output = ready.unrolled.tape.outputs[trouble.output if trouble.stream == 0 else 0].name
-            raise Refusal(f"'{ready.dated.contract.title}': '{output}' is not a finite number on path {trouble.path} "
-                          f"(seed {seed}, stream {trouble.stream}); a formula divides by 0, overflows or leaves the "
-                          f"domain of log, sqrt or a power") from None
+            with _finite(ready):
+                valuation = value(ready, wish, seed=seed, threads=threads, progress=progress, notice=notice)
         except KeyboardInterrupt:
             if not results:
                 raise
@@ -234,6 +296,47 @@ def _price(
         if valuation.interrupted:
             break
     return PriceTable(tuple(results), tuple(each.contract.title for each in dated[len(results):]))
+
+
+def _greeks(
+    made: Request,
+    dated: Sequence[DatedContract],
+    wishes: Sequence[Wish],
+    asked: Sequence[Precision],
+    seeds: Sequence[int],
+    threads: int | None,
+    progress: Progress | None,
+    notice: Callable[[str], None] | None,
+) -> GreeksTable:
+    """The sensitivities of every contract."""
+    from mcx.estimators.greeks import sensitivities
+    from mcx.report.greek_results import GreeksTable
+    from mcx.report.greek_summary import greeks_result
+
+    results = []
+    for ready, wish, precision, seed in zip(_ready(made, dated), wishes, asked, seeds, strict=True):
+        with _finite(ready):
+            found = sensitivities(ready, made.market, wish, precision, seed=seed, threads=threads, progress=progress,
+                                  notice=notice)
+        results.append(greeks_result(ready, made.market, wish, found))
+    return GreeksTable(tuple(results))
+
+
+@contextmanager
+def _finite(ready: Ready) -> Iterator[None]:
+    """Turns a number that is not finite into a refusal that names the path."""
+    from mcx.machine.run import NonFinitePath, NonFiniteSum
+
+    why = "a formula divides by 0, overflows or leaves the domain of log, sqrt or a power"
+    try:
+        yield
+    except NonFinitePath as trouble:
+        output = ready.unrolled.tape.outputs[trouble.output if trouble.stream == 0 else 0].name
+        raise Refusal(f"'{ready.dated.contract.title}': '{output}' is not a finite number on path {trouble.path} (seed "
+                      f"{trouble.seed}, stream {trouble.stream}); {why}") from None
+    except NonFiniteSum as trouble:
+        raise Refusal(f"'{ready.dated.contract.title}': a derivative is not a finite number on one of the 64 paths from "
+                      f"{trouble.first_path} on (seed {trouble.seed}, stream {trouble.stream}); {why}") from None
 
 
 def _ready(made: Request, dated: Sequence[DatedContract]) -> list[Ready]:

@@ -22,6 +22,8 @@ if TYPE_CHECKING:
 
 NO, WRONG, INTERRUPTED = 1, 2, 130
 
+MOVES = tuple(f"{move}%" for move in range(-5, 6))  # of a ladder or grid, where none are named
+
 FILES = click.argument("files", nargs=-1, required=True, metavar="FILES…")
 AS_JSON = click.option("--json", "as_json", is_flag=True, help="One JSON object, full precision.")
 THREADS = click.option("--threads", type=int, help="Processors to use; changes no digit.  [all]")
@@ -99,6 +101,31 @@ def price(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
         if wishes["record"]:
             _complain("interrupted: no record was written")
         sys.exit(INTERRUPTED)
+
+
+@cli.command()
+@FILES
+@click.option("--estimator", default="auto", help="auto, pathwise, likelihood or mixed.  [auto]")
+@click.option("--bump", metavar="SIZE", help="Revalue as well, for comparison: 1% moves spots by 1 %, vols by a point.")
+@click.option("--asset", "assets", multiple=True, help="Only this asset; may be given again.")
+@click.option("--ladder", is_flag=True, help="Price and deltas as all spots move.")
+@click.option("--grid", is_flag=True, help="The ladder, and the price as all spots and all vols move.")
+@click.option("--spot-moves", metavar="A,B,…", help="Moves of the ladder or grid, as -10%,-5%,0,5%.  [-5% to 5%]")
+@click.option("--vol-moves", metavar="A,B,…", help="Moves of the grid, in points.  [-5% to 5%]")
+@sampling
+@AS_JSON
+@click.option("--record", type=click.Path(), help="Write a valuation record to this new file.")
+def greeks(files: tuple[str, ...], as_json: bool, ladder: bool, grid: bool, spot_moves: str | None,
+           vol_moves: str | None, **wishes: object) -> None:
+    """How does it move? Delta, gamma, vega, rho, theta and more, each with its error and its estimator."""
+    from mcx import api
+
+    if vol_moves is not None and not grid or spot_moves is not None and not (ladder or grid):
+        raise click.UsageError("'--spot-moves' goes with '--ladder' or '--grid', '--vol-moves' with '--grid'")
+    moves = {"spot_moves": _moves(spot_moves) if ladder or grid else (), "vol_moves": _moves(vol_moves) if grid else ()}
+    with _progress() as (progress, notice):
+        result = api.greeks(*files, progress=progress, notice=notice, **moves, **wishes)
+    _show(result, as_json, _greeks_view)
 
 
 @cli.command()
@@ -211,6 +238,21 @@ def _price_view(result: Result, page: Page) -> None:
     from mcx.report.results import PriceTable
 
     (show_prices if isinstance(result, PriceTable) else show_price)(result, page)
+
+
+def _moves(text: str | None) -> tuple[str, ...]:
+    """Moves parted by commas, or the usual ones."""
+    return MOVES if text is None else tuple(move.strip() for move in text.split(","))
+
+
+def _greeks_view(result: Result, page: Page) -> None:
+    from mcx.report.greek_results import GreeksTable
+    from mcx.report.greek_view import show_greeks
+
+    for number, each in enumerate(result.contracts if isinstance(result, GreeksTable) else (result,)):
+        if number:
+            page.line()
+        show_greeks(each, page)
 
 
 def _readback_view(result: Result, page: Page) -> None:

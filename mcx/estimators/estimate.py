@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 NORMAL_95 = 1.959963984540054  # the 97.5 % point of the standard normal
 ROUNDING = 1e-12  # relative
@@ -12,20 +12,25 @@ ROUNDING = 1e-12  # relative
 
 @dataclass(frozen=True, slots=True)
 class Estimate:
-    """The mean of `paths` independent paths and the standard error of that mean."""
+    """The mean over `paths` paths and the standard error of that mean.
+
+    `quantile` times the error is half the width of the 95 % interval: that of the normal law for many independent
+    paths, that of Student's t where the error is that of a few independent means.
+    """
 
     value: float
     standard_error: float
     paths: int
+    quantile: float = NORMAL_95
 
     @property
     def half_width(self) -> float:
         """Half the width of the 95 % interval."""
-        return NORMAL_95 * self.standard_error
+        return self.quantile * self.standard_error
 
     @property
     def interval95(self) -> tuple[float, float]:
-        """The 95 % confidence interval, by the normal law."""
+        """The 95 % confidence interval."""
         return self.value - self.half_width, self.value + self.half_width
 
     def z(self, truth: float) -> float:
@@ -38,7 +43,7 @@ class Estimate:
 
     def times(self, factor: float) -> Estimate:
         """The estimate of a fixed multiple."""
-        return Estimate(self.value * factor, self.standard_error * abs(factor), self.paths)
+        return replace(self, value=self.value * factor, standard_error=self.standard_error * abs(factor))
 
 
 def estimates(paths: int, means: Sequence[float], squares: Sequence[float]) -> tuple[Estimate, ...]:

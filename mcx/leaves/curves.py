@@ -2,15 +2,16 @@
 
 A zero rate r to time t is the log -r t of a discount factor, if it is continuously compounded; funding spreads and
 yields are read by the same rule, and forwards are the log of the forward over the spot. Every curve starts at (0, 0),
-is linear in the log between points, and keeps its last slope beyond them: a flat forward rate.
+is linear in the log between points, and keeps its last slope beyond them: a flat forward rate. Values may be complex:
+sensitivities are taken by a complex step (`jacobian.py`).
 """
 
 from __future__ import annotations
 
 import datetime
-import math
-from bisect import bisect_left
 from dataclasses import dataclass
+
+import numpy as np
 
 from mcx.checked.market import Curve, RateConvention
 from mcx.dates.day_counts import year_fraction
@@ -24,17 +25,18 @@ class LogCurve:
     logs: tuple[float, ...]
     last_slope: float
 
-    def log(self, time: float) -> float:
-        """The log at a time in years; linear between the points."""
-        if time >= self.times[-1]:
-            return self.logs[-1] + self.last_slope * (time - self.times[-1])
-        after = max(bisect_left(self.times, time), 1)
-        t0, t1 = self.times[after - 1], self.times[after]
-        weight = (time - t0) / (t1 - t0)
-        return (1.0 - weight) * self.logs[after - 1] + weight * self.logs[after]
+    def log(self, time: float | np.ndarray) -> np.number | np.ndarray:
+        """The log at times in years; linear between the points."""
+        slope_part = self.last_slope * np.maximum(time - self.times[-1], 0.0)
+        if len(self.times) == 1:
+            return self.logs[-1] + slope_part
+        times, logs, held = np.array(self.times), np.array(self.logs), np.minimum(time, self.times[-1])
+        after = np.maximum(np.searchsorted(times, held), 1)
+        weight = (held - times[after - 1]) / (times[after] - times[after - 1])
+        return (1.0 - weight) * logs[after - 1] + weight * logs[after] + slope_part
 
-    def factor(self, time: float) -> float:
-        return math.exp(self.log(time))
+    def factor(self, time: float) -> np.number:
+        return np.exp(self.log(time))
 
 
 NOTHING = LogCurve((0.0,), (0.0,), 0.0)
@@ -66,9 +68,9 @@ def _zero_log(convention: RateConvention, time: float, rate: float) -> float:
         years = year_fraction(convention.day_count, convention.since, day)
     match convention.compounding:
         case "annual":
-            return -years * math.log1p(rate)
+            return -years * np.log1p(rate)
         case "simple":
-            return -math.log1p(rate * years)
+            return -np.log1p(rate * years)
     return -rate * years
 
 
@@ -77,7 +79,7 @@ def _log(curve: Curve, time: float, value: float, spot: float) -> float:
         case "zero":
             return _zero_log(curve.convention, time, value)
         case "discount":
-            return math.log(value)
+            return np.log(value)
         case "forward":
-            return math.log(value / spot)
+            return np.log(value / spot)
     raise ValueError(f"no curve of discount factors: {curve.form}")

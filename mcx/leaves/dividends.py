@@ -57,7 +57,7 @@ def pays_cash(asset: AssetMarket) -> bool:
         each.cash and each.time > SAME_TIME for each in asset.dividends)
 
 
-def payouts(asset: AssetMarket, growth: Callable[[float], float], last: float | None) -> Payouts:
+def payouts(asset: AssetMarket, growth: Callable[[float | np.ndarray], np.ndarray], last: float | None) -> Payouts:
     """The dividends of an asset after today; of a decrement in points up to `last` (None: as long as contracts live).
 
     `growth` is the log of the forward over the spot before dividends. Where a blend makes shares of cash, forwards stay
@@ -66,7 +66,7 @@ def payouts(asset: AssetMarket, growth: Callable[[float], float], last: float | 
     if asset.decrement is not None and asset.decrement.points:
         days = np.arange(1, math.floor((MOST_YEARS if last is None else last) * DAYS + 1e-6) + 1) / DAYS
         paid = asset.decrement.quoted.value / DAYS
-        return Payouts(cash_times=tuple(days), worth=tuple(paid * np.exp(-growth(day)) for day in days))
+        return Payouts(cash_times=tuple(days), worth=tuple(paid * np.exp(-growth(days))))
     shares: list[tuple[float, float]] = []
     cash: list[tuple[float, float]] = []
     forward, before, left = asset.spot.value, 0.0, 0.0

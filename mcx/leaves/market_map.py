@@ -1,13 +1,14 @@
 """From the market document to the tape's leaves: a small, smooth, deterministic map.
 
 Each leaf is an exact integral of the market's curves over one step, or a term of the contract. The map knows nothing of
-payoffs; its derivative by every number of the market document belongs here as well, when sensitivities are asked for.
+payoffs. It works on all leaves of one kind at once and holds for complex numbers too, so that a complex step through it
+gives its derivative by every number of the market document (`jacobian.py`).
 """
 
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from functools import partial
 
@@ -21,6 +22,7 @@ from mcx.faults import Fault
 from mcx.leaves.correlation import correlation_matrix, lower_factor
 from mcx.leaves.curves import log_curve
 from mcx.leaves.dividends import payouts, pays_cash
+from mcx.leaves.grouped import Factors, Group, Grouped, grouped
 from mcx.leaves.vols import VolCurve, covariance_integral, vol_curve
 from mcx.tape.formulas import figure
 from mcx.tape.program import Leaf, LeafKind
@@ -116,23 +118,23 @@ class MarketMap:
         day (composite); the spot at time 0."""
         return float(self._forward(self.contract.assets.index(asset), time))
 
-    def escrowed(self, asset: int, time: float, last: float) -> float:
+    def escrowed(self, asset: int, time: float | np.ndarray, last: float | np.ndarray) -> np.number | np.ndarray:
         """What the cash dividends after a time and up to `last` are worth then, in the asset's currency."""
         paid = self._payouts[asset]
         return (paid.cash_to(last) - paid.cash_to(time)) * np.exp(self._own_growth(asset, time))
 
-    def stripped(self, asset: int, last: float | None = None) -> float:
+    def stripped(self, asset: int, last: float | np.ndarray | None = None) -> np.number | np.ndarray:
         """The spot without the cash dividends up to the last observation: what the vol is about."""
         last = (self.last or 0.0) if last is None else last
         return self.quotes[asset].spot.value - self._payouts[asset].cash_to(last)
 
     def discount(self, time: float) -> float:
         """The discount factor of the contract's currency, without funding."""
-        return self._rates.factor(time)
+        return float(self._rates.factor(time))
 
-    def funded_discount(self, time: float) -> float:
+    def funded_discount(self, time: float | np.ndarray) -> np.number | np.ndarray:
         """The discount factor for the issuer's payments: the funding spread added to the zero rate."""
-        return float(np.exp(self._rates.log(time) + self._funding.log(time)))
+        return np.exp(self._rates.log(time) + self._funding.log(time))
 
     def vol_to(self, asset: str, time: float) -> float:
         """The Black vol of an asset to a time: of its level without cash dividends to come, in the contract's currency
@@ -149,39 +151,49 @@ class MarketMap:
         names = self.contract.assets
         return float(self._correlation[names.index(first), names.index(second)])
 
-    def values(self, leaves: Iterable[Leaf]) -> np.ndarray:
+    def values(self, leaves: Iterable[Leaf] | Grouped) -> np.ndarray:
         """The leaves' values, shape (leaves,)."""
-        leaves = tuple(leaves)
-        factors = self._factors(leaves)
-        return np.array([factors[leaf] if leaf in factors else self._value(leaf) for leaf in leaves], dtype=np.float64)
+        leaves = leaves if isinstance(leaves, Grouped) else grouped(leaves)
+        found = [(group.positions, self._values(group)) for group in leaves.groups]
+        found += [(factors.positions, self._factors(factors)) for factors in leaves.factors]
+        values = np.empty(leaves.size, dtype=np.result_type(np.float64, *(part for _, part in found)))
+        for positions, part in found:
+            values[positions] = part
+        return values
 
-    def _value(self, leaf: Leaf) -> float:
-        asset, start, end = leaf.asset, leaf.start, leaf.end
-        match leaf.kind:
+    def _values(self, group: Group) -> np.ndarray:
+        asset, starts, ends = group.asset, group.starts, group.ends
+        rate = asset >= len(self.quotes)
+        lasts = np.array([leaf.last for leaf in group.leaves])
+        match group.kind:
             case LeafKind.LOG_SPOT:
-                rate = asset >= len(self.quotes)
-                return np.log(self._fx_spot(asset) if rate else self.stripped(asset, leaf.last))
+                return np.log(np.full(len(ends), self._fx_spot(asset)) if rate else self.stripped(asset, lasts))
             case LeafKind.FORWARD:
-                return self._forward(asset, end)
+                return np.array([self._forward(asset, end) for end in ends])
             case LeafKind.VARIANCE:
-                return self._variance(asset, leaf.other, start, end)
+                return self._variance(asset, group.leaves[0].other, starts, ends)
             case LeafKind.DRIFT:
-                growth = self._growth if asset < len(self.quotes) else self._fx_growth
-                return growth(asset, end) - growth(asset, start) - 0.5 * self._variance(asset, -1, start, end)
+                growth = self._fx_growth if rate else self._growth
+                return growth(asset, ends) - growth(asset, starts) - 0.5 * self._variance(asset, -1, starts, ends)
             case LeafKind.JUMP:
-                return self._payouts[asset].shares_at(end)
+                return self._payouts[asset].shares_at(ends)
             case LeafKind.ESCROW:
-                return self.escrowed(asset, end, leaf.last)
+                return self.escrowed(asset, ends, lasts)
             case LeafKind.MEAN_ESCROW:
                 paid = self._payouts[asset]
-                before = self._own_growth(asset, end) - paid.shares_at(end)
-                closing = (paid.cash_to(leaf.last) - paid.cash_before(end)) * np.exp(before)
-                return 0.5 * (self.escrowed(asset, start, leaf.last) + closing)
+                before = self._own_growth(asset, ends) - paid.shares_at(ends)
+                closing = (paid.cash_to(lasts) - paid.cash_before(ends)) * np.exp(before)
+                return 0.5 * (self.escrowed(asset, starts, lasts) + closing)
             case LeafKind.DISCOUNT:
-                return self.funded_discount(end)
+                return self.funded_discount(ends)
             case LeafKind.TERM:
-                return figure(self.contract, leaf)
-        raise ValueError(f"no leaf of the market: {leaf.kind}")
+                return np.array([figure(self.contract, leaf) for leaf in group.leaves])
+        raise ValueError(f"no leaf of the market: {group.kind}")
+
+    def _factors(self, factors: Factors) -> np.ndarray:
+        """One factorisation for each step."""
+        lower = lower_factor(self.step_covariance(factors.assets, factors.starts, factors.ends))
+        return lower[factors.steps, factors.rows, factors.columns]
 
     def _exchange(self, number: int, asset: AssetMarket) -> Exchange | None:
         how = self.contract.conversion.get(asset.name)
@@ -191,7 +203,7 @@ class MarketMap:
         if how == "composite":
             rate = self.market.fx_between(asset.currency, self.contract.currency)
             row = len(self.quotes) + self.rates_of_exchange.index(rate)
-            return Exchange(self._vols[row], float(self._correlation[number, row]), row)
+            return Exchange(self._vols[row], self._correlation[number, row], row)
         return None
 
     def _sign(self, per: tuple[str, str]) -> float:
@@ -216,11 +228,11 @@ class MarketMap:
         rate = self.rates_of_exchange[number - len(self.quotes)]
         return rate.spot.value ** self._sign(rate.per)
 
-    def _fx_growth(self, number: int, time: float) -> float:
+    def _fx_growth(self, number: int, time: float | np.ndarray) -> np.ndarray:
         """The log of the forward over the spot of a rate of exchange, by the difference of both currencies' rates."""
         return self._foreign_rates[number - len(self.quotes)].log(time) - self._rates.log(time)
 
-    def _base_growth(self, asset: int, time: float) -> float:
+    def _base_growth(self, asset: int, time: float | np.ndarray) -> np.ndarray:
         """The log of the forward over the spot before dividends, in the asset's own currency."""
         given, decrement = self._forwards[asset], self.quotes[asset].decrement
         if given is not None:
@@ -240,34 +252,24 @@ class MarketMap:
         together = covariance_integral(self._vols[asset], meets.vol, 0.0, time) * meets.correlation
         return self._own_growth(asset, time) - together
 
-    def _variance(self, asset: int, other: int, start: float, end: float) -> float:
-        """The variance of a log over a step, or that of the sum of two of them."""
-        own = covariance_integral(self._vols[asset], self._vols[asset], start, end)
+    def _variance(self, asset: int, other: int, start: np.ndarray, end: np.ndarray) -> np.ndarray:
+        """The variances of a log over steps, or those of the sum of two of them."""
+        vol = self._vols[asset]
+        own = covariance_integral(vol, vol, start, end)
         if other < 0:
             return own
-        return float(own + 2.0 * self.step_covariance([asset, other], start, end)[0, 1]
-                     + covariance_integral(self._vols[other], self._vols[other], start, end))
+        with_it = self._vols[other]
+        together = covariance_integral(vol, with_it, start, end) * self._correlation[asset, other]
+        return own + 2.0 * together + covariance_integral(with_it, with_it, start, end)
 
-    def _factors(self, leaves: Iterable[Leaf]) -> dict[Leaf, float]:
-        """All FACTOR leaves, one factorisation for each step and the assets that move in it."""
-        steps: dict[tuple[float, float], list[Leaf]] = {}
-        for leaf in leaves:
-            if leaf.kind is LeafKind.FACTOR:
-                steps.setdefault((leaf.start, leaf.end), []).append(leaf)
-        found: dict[Leaf, float] = {}
-        for (start, end), wanted in steps.items():
-            assets = sorted({asset for leaf in wanted for asset in (leaf.asset, leaf.other)})
-            factor = lower_factor(self.step_covariance(assets, start, end))
-            row = {asset: number for number, asset in enumerate(assets)}
-            found.update({leaf: float(factor[row[leaf.asset], row[leaf.other]]) for leaf in wanted})
-        return found
-
-    def step_covariance(self, assets: list[int], start: float, end: float) -> np.ndarray:
-        """The covariance of the logs over a step, shape (assets, assets), rates of exchange by their numbers:
+    def step_covariance(self, assets: Sequence[int], start: np.ndarray, end: np.ndarray) -> np.ndarray:
+        """The covariance of the logs over steps, shape (steps, assets, assets), rates of exchange by their numbers:
         correlation times the integral of the product of their vols."""
-        covariance = np.empty((len(assets), len(assets)))
-        for i, first in enumerate(assets):
-            for j, second in enumerate(assets[: i + 1]):
-                integral = covariance_integral(self._vols[first], self._vols[second], start, end)
-                covariance[i, j] = covariance[j, i] = self._correlation[first, second] * integral
+        rows = [[covariance_integral(self._vols[i], self._vols[j], start, end) * self._correlation[i, j]
+                 for j in assets[: number + 1]] for number, i in enumerate(assets)]
+        kind = np.result_type(*(values for row in rows for values in row))
+        covariance = np.empty((len(start), len(assets), len(assets)), dtype=kind)
+        for i, row in enumerate(rows):
+            for j, values in enumerate(row):
+                covariance[:, i, j] = covariance[:, j, i] = values
         return covariance

@@ -2,13 +2,15 @@
 
 Total variance w(t) = vol(t)^2 t starts at 0, is linear between the points and beyond the last keeps its vol; so the
 instantaneous vol is constant on each piece, and the integral of the product of two of them is an exact finite sum.
+Vols may be complex: sensitivities are taken by a complex step (`jacobian.py`).
 """
 
 from __future__ import annotations
 
 import math
-from bisect import bisect_left, bisect_right
 from dataclasses import dataclass
+
+import numpy as np
 
 from mcx.checked.market import Curve
 
@@ -28,9 +30,9 @@ class VolCurve:
         """The Black vol to a time in years; at 0 the instantaneous one."""
         return math.sqrt(self.total_variance(time) / time) if time > 0.0 else self.vols[0]
 
-    def at(self, time: float) -> float:
+    def at(self, time: float | np.ndarray) -> np.number | np.ndarray:
         """The instantaneous vol just after a time."""
-        return self.vols[bisect_right(self.times, time) - 1]
+        return np.array(self.vols)[np.searchsorted(self.times, time, side="right") - 1]
 
 
 def vol_curve(curve: Curve) -> VolCurve:
@@ -40,16 +42,18 @@ def vol_curve(curve: Curve) -> VolCurve:
     times, vols, variance = [0.0], [], 0.0
     for node in curve.nodes:
         total = node.quoted.value**2 * node.time
-        vols.append(math.sqrt(max(total - variance, 0.0) / (node.time - times[-1])))
+        rise = total - variance
+        vols.append(np.sqrt(rise / (node.time - times[-1])) if rise.real > 0.0 else 0.0)
         times.append(node.time)
         variance = total
     return VolCurve(tuple(times), (*vols, curve.nodes[-1].quoted.value))
 
 
-def covariance_integral(a: VolCurve, b: VolCurve, start: float, end: float) -> float:
+def covariance_integral(
+    a: VolCurve, b: VolCurve, start: float | np.ndarray, end: float | np.ndarray
+) -> np.number | np.ndarray:
     """The integral of a's vol times b's vol from `start` to `end`, in years: exact, piece by piece."""
-    cuts = {start, end}
-    for times in (a.times, b.times):
-        cuts.update(times[bisect_right(times, start) : bisect_left(times, end)])
-    ordered = sorted(cuts)
-    return sum(a.at(t0) * b.at(t0) * (t1 - t0) for t0, t1 in zip(ordered, ordered[1:]))
+    begins = np.union1d(a.times, b.times)
+    ends = np.append(begins[1:], np.inf)
+    lengths = np.minimum(np.expand_dims(end, -1), ends) - np.maximum(np.expand_dims(start, -1), begins)
+    return np.maximum(lengths, 0.0) @ (a.at(begins) * b.at(begins))

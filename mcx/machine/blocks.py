@@ -14,11 +14,12 @@ from concurrent.futures import ThreadPoolExecutor
 
 import numpy as np
 
-from mcx.machine.draws import fill_draws
+from mcx.machine.draw_plan import LEADING, PLAIN, DrawPlan
+from mcx.machine.draws import drawing_of, fill_draws
 from mcx.machine.forward import forward
 from mcx.machine.jit import jit
 from mcx.machine.prepare import KernelCode
-from mcx.machine.rows import borrowed, wide_vectors
+from mcx.machine.rows import wide_vectors
 from mcx.machine.sizes import GROUP, lanes_for
 
 _TASKS = 16  # pieces of a batch for each thread: a core that is busy with something else takes fewer
@@ -26,25 +27,27 @@ _CACHE_LINE = 8  # float64
 
 
 @jit
-def sweep(code, scalars, outputs, normals, uniforms, seed, stream, numbers, paths, registers, words,
-          means, squares, bad, values):  # fmt: skip
-    """Run whole blocks of paths and sum each output over each group of 64.
+def sweep(code, scalars, outputs, drawing, numbers, paths, registers, words, runs, room,
+          means, squares, bad, sums, values):  # fmt: skip
+    """Run whole blocks of paths and sum each output, and what the code sums, over each group of 64.
 
     numbers    (blocks * lanes,) uint64: path numbers, of which the first `paths` count
-    registers  (rows + 1, more than lanes) float64 and words (4, lanes) int32: room to work
+    drawing    see `Drawing`
+    registers  (rows + 1, more than lanes) float64, words (4, lanes) int32, runs (lanes / 64,) int64 and
+               room (LEADING, 64) float64: to work in
     means      (groups, outputs), written: the mean over each group
     squares    (groups, outputs), written: the sum of squares about that mean
     bad        (groups,) int64, written: path * outputs + output of the first value that is not finite, with
                the path counted from the group's first; -1 if there is none
+    sums       (groups up to the end of a block, sums), written: what the code sums
     values     (paths, outputs), written; or (0, outputs)
     """
     lanes, width = words.shape[1], outputs.shape[0]
-    registers = borrowed(registers)
     tree = registers[registers.shape[0] - 1]
     for first in range(0, paths, lanes):
-        fill_draws(registers, words, numbers[first : first + lanes], normals, uniforms, seed, stream)
-        forward(registers, code, scalars, lanes)
+        fill_draws(registers, words, runs, room, numbers[first : first + lanes], drawing)
         here = min(lanes, paths - first)
+        forward(registers, code, scalars, lanes, here, sums[first // GROUP : (first + lanes) // GROUP])
         for start in range(0, here, GROUP):
             group, count = (first + start) // GROUP, min(GROUP, here - start)
             finite = True
@@ -101,11 +104,12 @@ def _numbered(numbers: range | np.ndarray, first: int, end: int) -> np.ndarray:
 class Crew:
     """Threads, each with room to work, that run one kernel code; a context manager, for one caller."""
 
-    def __init__(self, code: KernelCode, seed: int, stream: int, threads: int, lanes: int | None = None):
+    def __init__(self, code: KernelCode, seed: int, stream: int, threads: int, lanes: int | None = None,
+                 plan: DrawPlan = PLAIN):
         self.code = code
         self.lanes = lanes or lanes_for(code.rows)
         self.threads = threads
-        self._draws = code.normals, code.uniforms, np.uint64(seed), np.uint64(stream)
+        self._drawing = drawing_of(plan, code.normals, code.uniforms, seed, stream)
         self._rooms = deque(self._room() for _ in range(threads))
         self._pool = ThreadPoolExecutor(threads) if threads > 1 else None
 
@@ -118,8 +122,8 @@ class Crew:
 
     def run(
         self, numbers: range | np.ndarray, values: np.ndarray | None = None
-    ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-        """Means, squares and first bad value of each group of the given path numbers, as `sweep` writes them.
+    ) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+        """Means, squares, first bad value and sums of each group of the given path numbers, as `sweep` writes them.
 
         numbers a range, or (paths,) uint64; values (paths, outputs) float64 is filled if given.
         """
@@ -127,6 +131,7 @@ class Crew:
         groups, blocks = -(-paths // GROUP), -(-paths // self.lanes)
         means, squares = np.empty((groups, outputs)), np.empty((groups, outputs))
         bad = np.empty(groups, dtype=np.int64)
+        sums = np.empty((blocks * self.lanes // GROUP, self.code.sums))
         pieces = min(blocks, self.threads * _TASKS) if self._pool else 1
         bounds = [blocks * piece // pieces * self.lanes for piece in range(pieces + 1)]
 
@@ -136,21 +141,24 @@ class Crew:
             these = slice(first // GROUP, -(-last // GROUP))
             written = np.empty((0, outputs)) if values is None else values[first:last]
             room = self._rooms.pop()
-            sweep(self.code.code, self.code.scalars, self.code.outputs, *self._draws,
+            sweep(self.code.code, self.code.scalars, self.code.outputs, self._drawing,
                   _numbered(numbers, first, end), last - first, *room,
-                  means[these], squares[these], bad[these], written)  # fmt: skip
+                  means[these], squares[these], bad[these], sums[first // GROUP :], written)  # fmt: skip
             self._rooms.append(room)
 
         for _ in self._pool.map(work, range(pieces)) if self._pool else map(work, range(pieces)):
             pass
-        return means, squares, bad
+        return means, squares, bad, sums[:groups]
 
-    def _room(self) -> tuple[np.ndarray, np.ndarray]:
-        """Registers and random words of one thread. Rows begin on cache lines, and are one line longer than
-        the lanes: with 512 lanes the same lane of all rows would else compete for the same few places of the
-        cache."""
+    def _room(self) -> tuple[np.ndarray, ...]:
+        """Registers, random words and what else one thread works in.
+
+        Rows begin on cache lines, and are one line longer than the lanes: with 512 lanes the same lane of all rows
+        would else compete for the same few places of the cache.
+        """
         stride = self.lanes + _CACHE_LINE
         raw = np.empty((self.code.rows + 1) * stride + _CACHE_LINE)
         start = -raw.ctypes.data // 8 % _CACHE_LINE
         registers = raw[start : start + (self.code.rows + 1) * stride].reshape(-1, stride)
-        return registers, np.empty((4, self.lanes), dtype=np.int32)
+        words, runs = np.empty((4, self.lanes), dtype=np.int32), np.empty(self.lanes // GROUP, dtype=np.int64)
+        return registers, words, runs, np.empty((LEADING, GROUP))

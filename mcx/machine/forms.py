@@ -49,9 +49,12 @@ class Form(IntEnum):
     SELECT_RSR = auto()
     STEP_RSR = auto()  # x + s z
     STEP_SSR = auto()
+    STEP_RRR = auto()
     DRIFT_STEP_RSSR = auto()  # x + m + s z: a step and the drift before it in one loop
     BRIDGE_LOW_RRSR = auto()  # ends x0 and x1, variance, log u
     BRIDGE_HIGH_RRSR = auto()
+    SUM_R = auto()  # over each group of 64 lanes; the destination is the number of a sum
+    SUM_RR = auto()  # of the products
 
 
 def kinds(form: Form) -> str:

@@ -8,31 +8,36 @@ from __future__ import annotations
 
 import numpy as np
 
+from mcx.machine.bits import sum_products, sum_values
 from mcx.machine.forms import Form
 from mcx.machine.jit import jit
-from mcx.machine.rows import borrowed, wide_vectors
+from mcx.machine.rows import wide_vectors
+from mcx.machine.sizes import GROUP
 from mcx.machine.special import exp_row, log_row
 
 
 @jit
-def forward(registers, code, scalars, lanes):
-    """Run the code (see `KernelCode`) on one block: registers (rows, at least lanes) float64."""
+def forward(registers, code, scalars, lanes, paths, sums):
+    """Run the code on one block: registers (rows, at least lanes) float64, code and scalars as in `KernelCode`.
+
+    sums (groups, sums) float64, written: over each group of 64 lanes, of which the first `paths` count.
+    """
     for line in range(code.shape[0]):
-        form = code[line, 0]
-        y = registers[code[line, 1]]
+        form, to = code[line, 0], code[line, 1]
         a, b, c, d = code[line, 2], code[line, 3], code[line, 4], code[line, 5]
         if form < Form.LT_RR:
-            _arithmetic(form, y, registers, scalars, a, b, lanes)
+            _arithmetic(form, registers[to], registers, scalars, a, b, lanes)
         elif form < Form.STEP_RSR:
-            _logic(form, y, registers, scalars, a, b, c, lanes)
+            _logic(form, registers[to], registers, scalars, a, b, c, lanes)
+        elif form < Form.SUM_R:
+            _model(form, registers[to], registers, scalars, a, b, c, d, lanes)
         else:
-            _model(form, y, registers, scalars, a, b, c, d, lanes)
+            _sum(form, sums[:, to], registers, a, b, paths)
 
 
 @jit
 def _arithmetic(form, y, registers, scalars, a, b, lanes):
     wide_vectors()
-    registers, scalars = borrowed(registers), borrowed(scalars)
     if form == Form.FILL_S:
         s = scalars[a]
         for i in range(lanes):
@@ -110,7 +115,6 @@ def _arithmetic(form, y, registers, scalars, a, b, lanes):
 @jit
 def _logic(form, y, registers, scalars, a, b, c, lanes):
     wide_vectors()
-    registers, scalars = borrowed(registers), borrowed(scalars)
     if form == Form.LT_RR:
         p, q = registers[a], registers[b]
         for i in range(lanes):
@@ -177,7 +181,6 @@ def _logic(form, y, registers, scalars, a, b, c, lanes):
 @jit
 def _model(form, y, registers, scalars, a, b, c, d, lanes):
     wide_vectors()
-    registers, scalars = borrowed(registers), borrowed(scalars)
     if form == Form.STEP_RSR:
         x, s, z = registers[a], scalars[b], registers[c]
         for i in range(lanes):
@@ -186,6 +189,10 @@ def _model(form, y, registers, scalars, a, b, c, d, lanes):
         start, s, z = scalars[a], scalars[b], registers[c]
         for i in range(lanes):
             y[i] = start + s * z[i]
+    elif form == Form.STEP_RRR:
+        x, s_row, z = registers[a], registers[b], registers[c]
+        for i in range(lanes):
+            y[i] = x[i] + s_row[i] * z[i]
     elif form == Form.DRIFT_STEP_RSSR:
         x, m, s, z = registers[a], scalars[b], scalars[c], registers[d]
         for i in range(lanes):
@@ -200,3 +207,19 @@ def _model(form, y, registers, scalars, a, b, c, d, lanes):
         for i in range(lanes):
             move = x1[i] - x0[i]
             y[i] = 0.5 * (x0[i] + x1[i] + np.sqrt(move * move - 2.0 * variance * log[i]))
+
+
+@jit
+def _sum(form, groups, registers, a, b, paths):
+    p, q = registers[a], registers[b]
+    for group in range(groups.shape[0]):
+        first = group * GROUP
+        if paths - first < GROUP:
+            total = 0.0
+            for i in range(first, paths):
+                total += p[i] * q[i] if form == Form.SUM_RR else p[i]
+            groups[group] = total
+        elif form == Form.SUM_RR:
+            groups[group] = sum_products(p, q, first)
+        else:
+            groups[group] = sum_values(p, first)

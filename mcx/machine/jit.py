@@ -27,10 +27,12 @@ def jit(function):
     """Compile on first use, to run without the GIL; with numpy's division, since numba's is no vector loop."""
     if not COMPILED:
         return function
+    # Kernels allocate nothing, so nothing needs counting: without `_nrt=False` every view of a row is counted by locked
+    # instructions, which takes 50 ns for each instruction of a tape, more than its loop over 64 lanes.
     # The folder is read when the cache is made, inside this call; other users of numba must not see ours.
     before, numba.config.CACHE_DIR = numba.config.CACHE_DIR, str(cache_folder())
     try:
-        return numba.njit(error_model="numpy", fastmath=_FLAGS, nogil=True, cache=True)(function)
+        return numba.njit(error_model="numpy", fastmath=_FLAGS, nogil=True, cache=True, _nrt=False)(function)
     finally:
         numba.config.CACHE_DIR = before
 

@@ -6,6 +6,7 @@ form takes them, and an instruction that would write a row it reads is given ano
 
 from __future__ import annotations
 
+from collections import deque
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
@@ -13,7 +14,7 @@ import numpy as np
 
 from mcx.machine.forms import FORMS, Form, kinds
 from mcx.tape.ops import OPS, Op
-from mcx.tape.program import Program
+from mcx.tape.program import ALONE, Program
 
 WIDTH = 6  # form, destination, up to four operands
 _WHOLE_POWERS = range(-8, 9)  # x ** n by multiplications
@@ -26,6 +27,7 @@ class KernelCode:
     code     (instructions, 6) int32: form, destination row, operands (rows or scalars, as the form says)
     scalars  (scalars,) float64
     outputs  (outputs,) int32: the row of each output
+    sums     how many sums the code takes
     rows     rows of the register file, spare ones included; the first normals + uniforms hold the draws
     """
 
@@ -35,13 +37,17 @@ class KernelCode:
     normals: int
     uniforms: int
     rows: int
+    sums: int = 0
 
 
 def prepare(program: Program) -> KernelCode:
     """The kernel's code for a program; takes some microseconds an instruction."""
     writer = _Writer(program)
     for form, destination, operands in _join_drifts(program):
-        writer.instruction(form, destination, operands)
+        if isinstance(form, Form) and form >= Form.SUM_R:
+            writer.sum(form, destination, operands)
+        else:
+            writer.instruction(form, destination, operands)
     outputs = [writer.output(operand) for operand in program.outputs.tolist()]
     return KernelCode(
         code=np.array(writer.code, dtype=np.int32).reshape(-1, WIDTH),
@@ -50,39 +56,55 @@ def prepare(program: Program) -> KernelCode:
         normals=program.normals,
         uniforms=program.uniforms,
         rows=writer.rows,
+        sums=len(program.sums),
     )
 
 
 def _join_drifts(program: Program) -> Iterator[tuple[Op | Form, int, tuple[int, ...]]]:
-    """The instructions, with x + m and the step that alone reads it made one: the step then loads x once."""
+    """The instructions, with x + m and the step that alone reads it made one: the step then loads x once; and the sums
+    between them, each as soon as it can be taken."""
     lines = [
         (Op(op), destination, tuple(operands[: OPS[Op(op)].arity]))
         for op, destination, *operands in program.code.tolist()
     ]
-    once = _read_once(lines, program.outputs.tolist())
+    sums = deque(sorted(enumerate(program.sums.tolist()), key=lambda part: part[1][2]))
+    once = _read_once(lines, program)
     number = 0
     while number < len(lines):
+        yield from _sums_until(number, sums)
         op, row, operands = lines[number]
         if op is Op.ADD and operands[1] < 0 <= operands[0] and number in once and number + 1 < len(lines):
             next_op, destination, step = lines[number + 1]
             if next_op is Op.STEP and step[0] == row and step[1] < 0 <= step[2] != row:
+                yield from _sums_until(number + 1, sums)
                 yield Form.DRIFT_STEP_RSSR, destination, (*operands, *step[1:])
                 number += 2
                 continue
         yield op, row, operands
         number += 1
+    yield from _sums_until(number, sums)
 
 
-def _read_once(lines: Sequence[tuple[Op, int, tuple[int, ...]]], outputs: Sequence[int]) -> set[int]:
+def _sums_until(line: int, sums: deque[tuple[int, list[int]]]) -> Iterator[tuple[Form, int, tuple[int, ...]]]:
+    """Those of the sums that are taken when this many instructions have run, or before."""
+    while sums and sums[0][1][2] <= line:
+        number, (left, right, _) = sums.popleft()
+        yield (Form.SUM_R, number, (left,)) if right == ALONE else (Form.SUM_RR, number, (left, right))
+
+
+def _read_once(lines: Sequence[tuple[Op, int, tuple[int, ...]]], program: Program) -> set[int]:
     """Numbers of the instructions whose value is read exactly once."""
     reads = [0] * len(lines)
     writer: dict[int, int] = {}  # by row: the instruction that wrote it last
+    summed: dict[int, list[int]] = {}
+    for left, right, line in program.sums.tolist():
+        summed.setdefault(line, []).extend((left, right))
     for number, (_, destination, operands) in enumerate(lines):
-        for row in operands:
+        for row in (*operands, *summed.get(number, ())):
             if row in writer:
                 reads[writer[row]] += 1
         writer[destination] = number
-    for row in outputs:
+    for row in (*program.outputs.tolist(), *summed.get(len(lines), ())):
         if row in writer:
             reads[writer[row]] += 1
     return {number for number, count in enumerate(reads) if count == 1}
@@ -112,6 +134,11 @@ class _Writer:
             self.place[destination], self.spare = self.spare, self.place[destination]
         self.write(op, self.place[destination], *sources)
 
+    def sum(self, form: Form, number: int, operands: Sequence[int]) -> None:
+        """Add up a row, or the products of two, over the paths."""
+        self.scratch_taken = 0
+        self.emit(form, number, *(self.place[k] if k >= 0 else self.filled(k) for k in operands))
+
     def output(self, operand: int) -> int:
         """The row of an output; a scalar gets a row of its own."""
         if operand >= 0:
@@ -137,10 +164,8 @@ class _Writer:
                 self.choose(Op.SQRT, to, a)
             case Op.POW, a, b if b < 0 <= a and self.scalars[-1 - b] in _WHOLE_POWERS:
                 self.power(to, a, int(self.scalars[-1 - b]))
-            case Op.STEP, x, s, z if s >= 0:
-                product = self.scratch()
-                self.write(Op.MUL, product, s, z)
-                self.write(Op.ADD, to, x, product)
+            case Op.STEP, x, s, z if s >= 0 > z:
+                self.choose(op, to, x, z, s)
             case (Op.BRIDGE_LOW | Op.BRIDGE_HIGH), x0, x1, variance, u:
                 log = self.scratch()
                 self.choose(Op.LOG, log, u)

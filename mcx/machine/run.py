@@ -4,13 +4,14 @@ from __future__ import annotations
 
 import os
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from enum import IntEnum
 
 import numpy as np
 
+from mcx.machine.draw_plan import PLAIN, DrawPlan, point_numbers
 from mcx.machine.prepare import KernelCode, prepare
-from mcx.machine.sizes import GROUP, batch_for
+from mcx.machine.sizes import BATCHES, GROUP, batch_for
 from mcx.tape.program import Program
 
 COMPILING = "compiling the kernels once for this machine, which takes about half a minute"
@@ -46,9 +47,29 @@ class Snapshot:
 
 @dataclass(frozen=True, slots=True)
 class BlockSums(Snapshot):
-    """The result of a run; `snapshots` are what it had reached on the way; `interrupted`: paths are missing."""
+    """The result of a run; `snapshots` are what it had reached on the way; `interrupted`: paths are missing.
+
+    batch_paths (64,) and sums (64, sums): the sums that the program asks for, over each of 64 fixed parts of the run,
+    and how many paths each part has (none, where the run has fewer than 64 groups of paths).
+    """
 
     snapshots: tuple[Snapshot, ...] = ()
+    interrupted: bool = False
+    batch_paths: np.ndarray = field(default_factory=lambda: np.zeros(BATCHES, dtype=np.int64))
+    sums: np.ndarray = field(default_factory=lambda: np.zeros((BATCHES, 0)))
+
+
+@dataclass(frozen=True, slots=True)
+class ScrambleSums:
+    """The result of a run over scrambled points: means, and squares about them, (scrambles, outputs), each over
+    `points` points.
+
+    `interrupted`: scrambles are missing; those here are whole.
+    """
+
+    points: int
+    means: np.ndarray
+    squares: np.ndarray
     interrupted: bool = False
 
 
@@ -63,6 +84,18 @@ class NonFinitePath(ArithmeticError):
         super().__init__(f"output {output} is not finite on path {path} (seed {seed}, stream {stream})")
 
 
+class NonFiniteSum(ArithmeticError):
+    """A sum over paths that is infinite or not a number while every output is finite.
+
+    sum, first_path, seed, stream: int, the first such sum, the first of the 64 paths, and the run they belong to.
+    """
+
+    def __init__(self, number: int, first_path: int, seed: int, stream: int):
+        self.sum, self.first_path, self.seed, self.stream = number, first_path, seed, stream
+        last = first_path + GROUP - 1
+        super().__init__(f"sum {number} is not finite over paths {first_path} to {last} (seed {seed}, stream {stream})")
+
+
 Progress = Callable[[int, float, float], None]
 Notice = Callable[[str], None]
 
@@ -73,6 +106,7 @@ def run(
     seed: int,
     paths: int,
     stream: int = Stream.MAIN,
+    plan: DrawPlan = PLAIN,
     first_path: int = 0,
     threads: int | None = None,
     lanes: int | None = None,
@@ -82,32 +116,37 @@ def run(
 ) -> BlockSums:
     """Mean and spread of every output over paths first_path .. first_path + paths - 1.
 
-    seed        0 .. 2^64 - 1; with it, the stream and the path numbers every digit is fixed
+    seed        0 .. 2^64 - 1; with it, the stream, the plan of draws and the path numbers every digit is fixed
     threads     None: all that the process may use; no digit depends on it, nor on `lanes`, a multiple of 64
     progress    called after each batch with the paths done and the mean and standard error of output 0
     snapshots   numbers of paths at which to note the sums; each is rounded up to a whole group of 64
     notice      called with a sentence if the kernels have to be compiled first
 
     Raises NonFinitePath for the first path with an output that is not finite, and KeyboardInterrupt if that
-    comes before the first batch is done; later the sums so far are returned, marked as interrupted.
+    comes before the first batch is done, and NonFiniteSum; later the sums so far are returned, marked as interrupted.
     """
     if paths < 1:
         raise ValueError(f"a run needs at least one path, not {paths}")
     code = prepare(program)
     reached: BlockSums | None = None  # replaced as a whole: an interruption cannot find it half made
-    with _crew(code, seed, stream, threads, lanes, notice) as crew:
-        from mcx.machine.sums import Totals
+    with _crew(code, seed, stream, threads, lanes, notice, plan) as crew:
+        from mcx.machine.sums import Batches, Totals
 
+        parts = Batches(code.sums, first_path // GROUP)
         totals = Totals(len(code.outputs), paths, snapshots)
         batch = batch_for(code, crew.lanes)
         try:
             for first in range(0, paths, batch):
                 count = min(batch, paths - first)
-                means, squares, bad = crew.run(range(first_path + first, first_path + first + count))
-                _refuse_bad(bad, first_path + first, code, seed, stream)
+                numbers = range(first_path + first, first_path + first + count)
+                means, squares, bad, sums = crew.run(numbers)
+                _refuse_bad(bad, numbers, code, seed, stream)
+                _refuse_bad_sum(sums, first_path + first, seed, stream)
                 totals.add(count, means, squares)
-                noted = tuple(Snapshot(*sums) for sums in totals.noted)
-                reached = BlockSums(totals.paths, totals.mean, totals.squares, noted)
+                parts.add(count, sums)
+                noted = tuple(Snapshot(*reached_then) for reached_then in totals.noted)
+                reached = BlockSums(totals.paths, totals.mean, totals.squares, noted, batch_paths=parts.paths.copy(),
+                                    sums=parts.sums)
                 if progress:
                     progress(reached.paths, float(reached.mean[0]), float(reached.standard_error[0]))
         except KeyboardInterrupt:
@@ -117,12 +156,74 @@ def run(
     return reached
 
 
+def run_scrambles(
+    program: Program,
+    *,
+    seed: int,
+    plan: DrawPlan,
+    points: int,
+    stream: int = Stream.MAIN,
+    threads: int | None = None,
+    lanes: int | None = None,
+    progress: Progress | None = None,
+    notice: Notice | None = None,
+) -> ScrambleSums:
+    """The mean of every output over the first `points` points, whole groups of 64, of each scramble of the plan.
+
+    `progress` is called with the paths done, and the mean and standard error of output 0 over the scrambles that are
+    whole, once there are two. The rest is as in `run`; after an interruption there is a result from two scrambles on.
+    """
+    if points < 1 or points % GROUP:
+        raise ValueError(f"a scramble has whole groups of {GROUP} points, not {points}")
+    code = prepare(program)
+    paths = plan.scrambles * points
+    whole: list[tuple[np.ndarray, np.ndarray]] = []  # means and squares of each whole scramble
+    with _crew(code, seed, stream, threads, lanes, notice, plan) as crew:
+        from mcx.machine.sums import Totals
+
+        batch = batch_for(code, crew.lanes)
+        totals = Totals(len(code.outputs), points, ())
+        try:
+            for first in range(0, paths, batch):
+                numbers = _numbers(first, min(first + batch, paths), points)
+                means, squares, bad, _ = crew.run(numbers)
+                _refuse_bad(bad, numbers, code, seed, stream)
+                done = 0
+                while done < len(numbers):
+                    count = min(points - totals.paths, len(numbers) - done)
+                    groups = slice(done // GROUP, (done + count) // GROUP)
+                    totals.add(count, means[groups], squares[groups])
+                    done += count
+                    if totals.paths == points:
+                        whole.append((totals.mean, totals.squares))
+                        totals = Totals(len(code.outputs), points, ())
+                if progress and len(whole) > 1:
+                    prices = np.array([mean[0] for mean, _ in whole])
+                    error = prices.std(ddof=1) / np.sqrt(len(whole))
+                    progress(first + len(numbers), float(prices.mean()), float(error))
+        except KeyboardInterrupt:
+            if len(whole) < 2:
+                raise
+    means, squares = map(np.array, zip(*whole, strict=True))
+    return ScrambleSums(points, means, squares, interrupted=len(whole) < plan.scrambles)
+
+
+def _numbers(first: int, last: int, points: int) -> np.ndarray:
+    """The path numbers of a part of a run over scrambles of so many points."""
+    scrambles = range(first // points, -(-last // points))
+    return np.concatenate([
+        point_numbers(scramble, min(last - scramble * points, points) - start, start)
+        for scramble in scrambles for start in [max(first - scramble * points, 0)]
+    ])  # fmt: skip
+
+
 def levels(
     program: Program,
     *,
     seed: int,
     numbers: Sequence[int] | np.ndarray,
     stream: int = Stream.MAIN,
+    plan: DrawPlan = PLAIN,
     threads: int | None = None,
     lanes: int | None = None,
 ) -> np.ndarray:
@@ -130,7 +231,7 @@ def levels(
     code = prepare(program)
     numbers = np.array(numbers, dtype=np.uint64)
     values = np.empty((len(numbers), len(code.outputs)))
-    with _crew(code, seed, stream, threads, lanes) as crew:
+    with _crew(code, seed, stream, threads, lanes, plan=plan) as crew:
         crew.run(numbers, values)
     return values
 
@@ -143,8 +244,9 @@ def values_by_path(
 
 
 def draws(
-    program: Program, *, seed: int, numbers: Sequence[int] | np.ndarray, stream: int = Stream.MAIN
-) -> np.ndarray:
+    program: Program, *, seed: int, numbers: Sequence[int] | np.ndarray, stream: int = Stream.MAIN,
+    plan: DrawPlan = PLAIN,
+) -> np.ndarray:  # fmt: skip
     """What the paths draw, normals first, then uniforms; shape (paths, draws)."""
     nothing = Program(
         code=np.empty((0, 6), dtype=np.int32),
@@ -154,7 +256,7 @@ def draws(
         uniforms=program.uniforms,
         rows=program.draws,
     )
-    return levels(nothing, seed=seed, stream=stream, numbers=numbers)
+    return levels(nothing, seed=seed, stream=stream, numbers=numbers, plan=plan)
 
 
 def available_threads() -> int:
@@ -163,7 +265,7 @@ def available_threads() -> int:
 
 
 def _crew(code: KernelCode, seed: int, stream: int, threads: int | None, lanes: int | None,
-          notice: Notice | None = None):
+          notice: Notice | None = None, plan: DrawPlan = PLAIN):
     """The crew of a run; numba is imported only now, and compiles only now."""
     from mcx.machine.jit import is_cold
 
@@ -171,11 +273,17 @@ def _crew(code: KernelCode, seed: int, stream: int, threads: int | None, lanes: 
         notice(COMPILING)
     from mcx.machine.blocks import Crew
 
-    return Crew(code, seed, stream, threads or available_threads(), lanes)
+    return Crew(code, seed, stream, threads or available_threads(), lanes, plan)
 
 
-def _refuse_bad(bad: np.ndarray, first: int, code: KernelCode, seed: int, stream: int) -> None:
+def _refuse_bad(bad: np.ndarray, numbers: range | np.ndarray, code: KernelCode, seed: int, stream: int) -> None:
     found = np.flatnonzero(bad >= 0)
     if len(found):
         path, output = divmod(int(bad[found[0]]), len(code.outputs))
-        raise NonFinitePath(first + GROUP * int(found[0]) + path, output, seed, stream)
+        raise NonFinitePath(int(numbers[GROUP * int(found[0]) + path]), output, seed, stream)
+
+
+def _refuse_bad_sum(sums: np.ndarray, first: int, seed: int, stream: int) -> None:
+    if not np.isfinite(sums).all():
+        group, number = np.argwhere(~np.isfinite(sums))[0].tolist()
+        raise NonFiniteSum(number, first + GROUP * group, seed, stream)

@@ -13,6 +13,7 @@ from mcx.machine.prepare import KernelCode, prepare
 from mcx.tape.program import Program
 
 GROUP = 64  # paths that are summed together, whatever the block
+BATCHES = 64  # parts of a run: group g of 64 paths belongs to part g mod 64, so that the parts grow together
 
 _NORMAL, _UNIFORM, _OUTPUT = 2.7, 0.9, 0.8
 _USUAL = 0.17

@@ -7,7 +7,7 @@ from collections.abc import Iterable
 import numpy as np
 
 from mcx.machine.jit import jit
-from mcx.machine.sizes import GROUP
+from mcx.machine.sizes import BATCHES, GROUP
 
 
 @jit
@@ -40,6 +40,45 @@ def _add(pair, at, term):
     else:
         pair[at + 1] += (term - total) + pair[at]
     pair[at] = total
+
+
+@jit
+def merge_batches(totals, first, sums):
+    """Add the sums of groups first, first + 1, ... to their batches, in order.
+
+    totals (BATCHES, 2, sums) float64: each sum and what its additions lost; sums (groups, sums) float64.
+    """
+    for group in range(sums.shape[0]):
+        total, lost = totals[(first + group) % BATCHES]
+        for k in range(sums.shape[1]):
+            term, before = sums[group, k], total[k]
+            after = before + term
+            larger, smaller = (before, term) if abs(before) >= abs(term) else (term, before)
+            lost[k] += (larger - after) + smaller
+            total[k] = after
+
+
+class Batches:
+    """What the code sums, over each of 64 fixed parts of the run: from their spread comes the error of whatever is
+    made of the sums afterwards."""
+
+    def __init__(self, sums: int, first_group: int):
+        self.paths = np.zeros(BATCHES, dtype=np.int64)
+        self._group = first_group
+        self._totals = np.zeros((BATCHES, 2, sums))
+
+    @property
+    def sums(self) -> np.ndarray:
+        """(BATCHES, sums)"""
+        return self._totals.sum(axis=1)
+
+    def add(self, paths: int, sums: np.ndarray) -> None:
+        """The next paths as groups; all but the last call of a run bring whole groups."""
+        counts = np.full(len(sums), GROUP)
+        counts[-1] = paths - GROUP * (len(sums) - 1)
+        np.add.at(self.paths, (self._group + np.arange(len(sums))) % BATCHES, counts)
+        merge_batches(self._totals, self._group, sums)
+        self._group += len(sums)
 
 
 class Totals:

@@ -1,4 +1,4 @@
-"""Valuation records: everything that a price depends on, so that it can be found again, to the last bit.
+"""Valuation records: everything that a price, or its sensitivities, depend on, so that it can be found again, to the last bit.
 
 A record is one JSON document: the text of every file and definition with its SHA-256, the request, the versions of all
 that computes, the type of the processor, and the results. Its own SHA-256 stands in it, so that a record which was cut
@@ -23,9 +23,13 @@ from mcx.text.located import Document
 FORMAT = 1
 PACKAGES = ("mcx", "numpy", "numba", "llvmlite", "scipy", "pyyaml", "holidays", "python-dateutil")
 CHECKSUM = "sha256"
+REQUEST = {  # what a result repeats of its request, by verb
+    "price": ("contract", "paths", "seed", "reduction"),
+    "greeks": ("contract", "paths", "seed", "reduction", "estimator", "bump", "assets", "spot_moves", "vol_moves"),
+}
 CLOSE = 1e-12  # relative, on another type of processor
 # How long it took, how the number of paths was found, and what is worded: sentences change with versions.
-NOT_COMPARED = ("seconds", "planned", "warnings", "assumptions", "limits", "cautions", "calendar_version")
+NOT_COMPARED = ("seconds", "planned", "choices", "warnings", "assumptions", "limits", "cautions", "calendar_version")
 
 
 def environment() -> dict[str, str]:
@@ -53,13 +57,14 @@ def _version(package: str) -> str:
         return "not installed"
 
 
-def make_record(documents: tuple[Document, ...], results: list[dict]) -> dict:
-    """The record of a valuation of the documents (definitions of the library included)."""
+def make_record(documents: tuple[Document, ...], verb: str, results: list[dict]) -> dict:
+    """The record of what a verb found about the documents (definitions of the library included)."""
     texts = {document.file: document.text for document in documents}
     record = {
         "record": FORMAT,
         "inputs": [{"file": file, CHECKSUM: _sha256(text), "text": text} for file, text in texts.items()],
-        "request": [{key: result[key] for key in ("contract", "paths", "seed", "reduction")} for result in results],
+        "verb": verb,
+        "request": [{key: result[key] for key in REQUEST[verb]} for result in results],
         "environment": environment(),
         "results": results,
     }
@@ -178,6 +183,8 @@ def differences(old: object, new: object, name: str = "") -> Iterator[tuple[str,
 def _label(entry: object, number: int) -> str:
     """How a list's entry is called: by its name or date where it has one."""
     if isinstance(entry, dict):
+        if {"name", "asset", "tenor"} <= entry.keys():
+            return f"[{' '.join(filter(None, (entry['name'], entry['asset'], entry['tenor'])))}]"
         for key in ("contract", "name", "date", "asset"):
             if entry.get(key):
                 return f"[{entry[key]}]"

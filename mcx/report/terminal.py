@@ -56,18 +56,19 @@ class Page:
             grid.add_row(Text(name), Text(text))
         self.console.print(grid)
 
-    def table(self, heads: Sequence[str], rows: Iterable[Sequence[str]], words: int = 1) -> None:
-        """A table whose first `words` columns hold words; the others hold numbers, aligned right.
+    def table(self, heads: Sequence[str], rows: Iterable[Sequence[str]], words: int = 1, last: int = 0) -> None:
+        """A table whose first `words` columns and `last` columns hold words; the others hold numbers, aligned right.
 
         Where the page is too narrow words go below one another; a table that is still too wide stays as wide as it must
         be: no word and no number is ever broken or cut.
         """
         rows = [list(row) for row in rows]
         page = self.console.width
-        widths = _widths([list(column) for column in zip(heads, *rows, strict=True)], words, page)
+        kinds = [number < words or number >= len(heads) - last for number in range(len(heads))]
+        widths = _widths([list(column) for column in zip(heads, *rows, strict=True)], kinds, page)
         table = Table(box=None, pad_edge=False, padding=(0, GAP, 0, 0), header_style="bold")
-        for number, (head, width) in enumerate(zip(heads, widths, strict=True)):
-            table.add_column(head, width=width, justify="left" if number < words else NUMBER, overflow="fold")
+        for head, width, worded in zip(heads, widths, kinds, strict=True):
+            table.add_column(head, width=width, justify="left" if worded else NUMBER, overflow="fold")
         for row in rows:
             table.add_row(*map(Text, row))
         self.console.width = max(page, INDENT + sum(widths) + GAP * len(widths))
@@ -75,12 +76,14 @@ class Page:
         self.console.width = page
 
 
-def _widths(columns: Sequence[Sequence[str]], words: int, page: int) -> list[int]:
-    """The width of each column of cells: all of it where the page has room, else the longest word's and a fair share
-    of what is left; a column of numbers has all it needs."""
+def _widths(columns: Sequence[Sequence[str]], words: Sequence[bool], page: int) -> list[int]:
+    """The width of each column of cells: all of it where the page has room, else, of words, the longest word's and a
+    fair share of what is left; a column of numbers has all it needs."""
     full = [max(map(cell_len, cells)) for cells in columns]
-    least = [max(cell_len(word) for cell in cells for word in cell.split() or [""]) for cells in columns[:words]]
-    least += full[words:]
+    least = [
+        max(cell_len(word) for cell in cells for word in cell.split() or [""]) if worded else width
+        for cells, worded, width in zip(columns, words, full, strict=True)
+    ]
     room = page - INDENT - GAP * (len(columns) - 1) - sum(least)
     share = max(0.0, min(1.0, room / max(sum(full) - sum(least), 1)))
     return [low + int(share * (high - low)) for low, high in zip(least, full, strict=True)]

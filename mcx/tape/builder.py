@@ -7,7 +7,7 @@ from collections.abc import Iterable
 from mcx.faults import Place
 from mcx.tape.algebra import SIMPLER
 from mcx.tape.ops import Op
-from mcx.tape.program import Instruction, Leaf, LevelKey, Output, Tape
+from mcx.tape.program import Instruction, Leaf, LevelKey, Output, Sum, Tape
 from mcx.tape.rules import evaluate
 
 COMMUTATIVE = frozenset({Op.ADD, Op.MUL, Op.MIN, Op.MAX, Op.EQ, Op.NE, Op.AND, Op.OR})
@@ -23,6 +23,18 @@ class Builder:
         self.instructions: list[Instruction] = []
         self._numbers: dict[tuple, int] = {}
         self._constants: dict[int, float] = {}
+
+    @staticmethod
+    def of(tape: Tape) -> Builder:
+        """A builder that goes on where a tape ends: its values keep their numbers."""
+        builder = Builder()
+        builder.instructions = list(tape.instructions)
+        for number, step in enumerate(tape.instructions):
+            key = (step.op, step.operands) if step.operands else (step.op, step.payload)
+            builder._numbers.setdefault(key, number)
+            if step.op is Op.CONSTANT:
+                builder._constants[number] = step.payload
+        return builder
 
     def number(self, value: int) -> float | None:
         """The number that a value is on every path whatever the leaves, or None."""
@@ -68,8 +80,8 @@ class Builder:
             return self.input(step.op, step.payload, step.place)
         return self.emit(step.op, *operands, place=step.place)
 
-    def tape(self, outputs: Iterable[Output], normals: int = 0, uniforms: int = 0) -> Tape:
-        return Tape(tuple(self.instructions), tuple(outputs), normals, uniforms)
+    def tape(self, outputs: Iterable[Output], normals: int = 0, uniforms: int = 0, sums: Iterable[Sum] = ()) -> Tape:
+        return Tape(tuple(self.instructions), tuple(outputs), normals, uniforms, tuple(sums))
 
     def _folded(self, op: Op, operands: tuple[int, ...]) -> int | None:
         known = [self._constants.get(value) for value in operands]

@@ -1,17 +1,17 @@
-"""Dead code: what no output depends on is taken out, the rest keeps its order."""
+"""Dead code: what no output and no sum depends on is taken out, the rest keeps its order."""
 
 from __future__ import annotations
 
 from dataclasses import replace
 
-from mcx.tape.program import Tape
+from mcx.tape.program import Sum, Tape
 
 
 def drop_dead_code(tape: Tape) -> Tape:
-    """The same outputs from only the instructions they need. Draws keep their dimensions."""
+    """The same outputs and sums from only the instructions they need. Draws keep their dimensions."""
     needed = bytearray(len(tape.instructions))
-    for output in tape.outputs:
-        needed[output.value] = 1
+    for value in (*(output.value for output in tape.outputs), *(k for part in tape.sums for k in _values_of(part))):
+        needed[value] = 1
     for number in range(len(tape.instructions) - 1, -1, -1):
         if needed[number]:
             for operand in tape.instructions[number].operands:
@@ -26,4 +26,12 @@ def drop_dead_code(tape: Tape) -> Tape:
             operands = tuple(renumbered[k] for k in step.operands)
             kept.append(step if operands == step.operands else replace(step, operands=operands))
     outputs = tuple(replace(output, value=renumbered[output.value]) for output in tape.outputs)
-    return replace(tape, instructions=tuple(kept), outputs=outputs)
+    sums = tuple(
+        Sum(renumbered[part.left], renumbered.get(part.right), renumbered.get(part.uniform, -1)) for part in tape.sums
+    )
+    return replace(tape, instructions=tuple(kept), outputs=outputs, sums=sums)
+
+
+def _values_of(part: Sum) -> tuple[int, ...]:
+    """What must stay for a sum: its factors, and the value that it is a derivative with respect to."""
+    return part.factors if part.uniform < 0 else (*part.factors, part.uniform)

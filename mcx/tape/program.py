@@ -6,7 +6,7 @@ are named values: the price, each leg, each condition. `Program` is a tape made 
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from enum import Enum
 
 import numpy as np
@@ -104,13 +104,30 @@ class Output:
 
 
 @dataclass(frozen=True, slots=True)
+class Sum:
+    """`left * right` on each path (right None: `left` alone), of which only the sum over many paths is wanted.
+
+    `uniform` is the value of the tape, the same on every path, that this is a derivative with respect to; -1: of none.
+    """
+
+    left: int
+    right: int | None = None
+    uniform: int = -1
+
+    @property
+    def factors(self) -> tuple[int, ...]:
+        return (self.left,) if self.right is None else (self.left, self.right)
+
+
+@dataclass(frozen=True, slots=True)
 class Tape:
-    """Instructions, outputs and how many normals and uniforms the draws must supply for each path."""
+    """Instructions, outputs, sums, and how many normals and uniforms the draws must supply for each path."""
 
     instructions: tuple[Instruction, ...]
     outputs: tuple[Output, ...]
     normals: int = 0
     uniforms: int = 0
+    sums: tuple[Sum, ...] = ()
 
     @property
     def leaves(self) -> tuple[Leaf, ...]:
@@ -125,7 +142,13 @@ class Tape:
                 shown += f" {step.payload}"
             lines.append(f"v{number} = {shown}")
         lines += [f"{output.name} -> v{output.value}" for output in self.outputs]
+        for wanted in self.sums:
+            by = f"by v{wanted.uniform} " if wanted.uniform >= 0 else ""
+            lines.append(f"sum {by}-> " + " * ".join(f"v{k}" for k in wanted.factors))
         return "\n".join(lines)
+
+
+ALONE = np.iinfo(np.int32).max
 
 
 @dataclass(frozen=True, slots=True)
@@ -138,6 +161,9 @@ class Program:
     code      (instructions, 6) int32: op, destination row, operands a, b, c, d (unused: 0)
     scalars   (scalars,) float64: values that are the same on every path
     outputs   (outputs,) int32: operand number of each output
+    sums      (sums, 3) int32: of two operands whose product is summed over the paths, the first; the second, or
+              ALONE where the first is summed alone; and how many instructions have run when it is: not later, since
+              a register may be needed again
     """
 
     code: np.ndarray
@@ -146,6 +172,7 @@ class Program:
     normals: int
     uniforms: int
     rows: int
+    sums: np.ndarray = field(default_factory=lambda: np.empty((0, 3), dtype=np.int32))
 
     @property
     def draws(self) -> int:

@@ -14,7 +14,7 @@ import numpy as np
 
 from mcx.tape.builder import COMMUTATIVE
 from mcx.tape.ops import Op
-from mcx.tape.program import Program, Tape
+from mcx.tape.program import ALONE, Program, Tape
 from mcx.tape.rules import evaluate
 
 
@@ -54,7 +54,9 @@ def lower(tape: Tape, leaf_values: Sequence[float] | np.ndarray) -> Program:
     draws = tape.normals + tape.uniforms
     registers = _Registers(draws)
     scalars = _Scalars()
-    last_use = _last_uses(tape)
+    ready = _ready_sums(tape, uniform)
+    last_use = _last_uses(tape, ready)
+    sums: dict[int, tuple[int, int, int]] = {}  # by number of the sum
     operand: dict[int, int] = {}  # value -> row, or -1 - scalar
     code: list[tuple[int, ...]] = []
 
@@ -63,9 +65,18 @@ def lower(tape: Tape, leaf_values: Sequence[float] | np.ndarray) -> Program:
             operand[value] = scalars.operand(uniform[value])
         return operand[value]
 
+    def add_up(after: int) -> set[int]:
+        """Note the sums that are complete after this value; the values that they read."""
+        for number in ready.get(after, ()):
+            left, right = tape.sums[number].left, tape.sums[number].right
+            sums[number] = read(left), ALONE if right is None else read(right), len(code)
+        return {value for number in ready.get(after, ()) for value in tape.sums[number].factors}
+
+    add_up(-1)
     for number, step in enumerate(tape.instructions):
         if uniform[number] is not None:
             continue
+        done = set(step.operands)
         if step.op is Op.NORMAL:
             operand[number] = step.payload
         elif step.op is Op.UNIFORM:
@@ -76,11 +87,10 @@ def lower(tape: Tape, leaf_values: Sequence[float] | np.ndarray) -> Program:
                 sources.reverse()
             operand[number] = registers.take()
             code.append((int(step.op), operand[number], *sources, *(0,) * (4 - len(sources))))
-            if last_use[number] == number:  # nothing reads it: the register is free at once
-                registers.free.append(operand[number])
-            for value in set(step.operands):
-                if last_use[value] == number and operand[value] >= draws:
-                    registers.free.append(operand[value])
+            done.add(number)  # nothing may read it: the register is then free at once
+        for value in sorted(done | add_up(number)):
+            if last_use[value] == number and operand[value] >= draws:
+                registers.free.append(operand[value])
     outputs = [read(output.value) for output in tape.outputs]
     return Program(
         code=np.array(code, dtype=np.int32).reshape(-1, 6),
@@ -89,6 +99,7 @@ def lower(tape: Tape, leaf_values: Sequence[float] | np.ndarray) -> Program:
         normals=tape.normals,
         uniforms=tape.uniforms,
         rows=draws + registers.used,
+        sums=np.array([sums[number] for number in range(len(sums))], dtype=np.int32).reshape(-1, 3),
     )
 
 
@@ -108,12 +119,23 @@ def uniform_values(tape: Tape, leaf_values: Sequence[float] | np.ndarray) -> lis
     return known
 
 
-def _last_uses(tape: Tape) -> list[int]:
+def _last_uses(tape: Tape, ready: dict[int, list[int]]) -> list[int]:
     """For each value the last instruction that reads it (itself if none does); outputs are read at the very end."""
     last = list(range(len(tape.instructions)))
     for number, step in enumerate(tape.instructions):
         for operand in step.operands:
             last[operand] = number
+    for number, parts in ready.items():
+        for value in {value for part in parts for value in tape.sums[part].factors}:
+            last[value] = max(last[value], number)
     for output in tape.outputs:
         last[output.value] = len(tape.instructions)
     return last
+
+
+def _ready_sums(tape: Tape, uniform: Sequence[float | None]) -> dict[int, list[int]]:
+    """The numbers of the sums by the value after which they can be taken: their last factor; -1: from the start."""
+    ready: dict[int, list[int]] = {}
+    for number, part in enumerate(tape.sums):
+        ready.setdefault(max((k for k in part.factors if uniform[k] is None), default=-1), []).append(number)
+    return ready

@@ -55,6 +55,9 @@ def problems(tape: Tape) -> list[str]:
     for output in tape.outputs:
         if not 0 <= output.value < len(tape.instructions):
             found.append(f"output '{output.name}' is no value of the tape")
+    for part in tape.sums:
+        if not all(-1 <= k < len(tape.instructions) for k in (*part.factors, part.uniform)) or min(part.factors) < 0:
+            found.append(f"{part} is of no values of the tape")
     names = [output.name for output in tape.outputs]
     found += [f"two outputs are called '{name}'" for name in sorted({n for n in names if names.count(n) > 1})]
     return found or _flag_problems(tape)

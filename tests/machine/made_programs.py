@@ -28,8 +28,9 @@ def program(
     scalars: Sequence[float] = (),
     normals: int = 0,
     uniforms: int = 0,
+    sums: Sequence[tuple[int, int, int]] = (),
 ) -> Program:
-    """A program of lines (op, destination, operands)."""
+    """A program of lines (op, destination, operands) and sums (first, second, instructions run)."""
     code = [(*line, *(0,) * (6 - len(line))) for line in lines]
     return Program(
         code=np.array(code, dtype=np.int32).reshape(-1, 6),
@@ -38,6 +39,7 @@ def program(
         normals=normals,
         uniforms=uniforms,
         rows=rows,
+        sums=np.array(sums, dtype=np.int32).reshape(-1, 3),
     )
 
 
@@ -63,8 +65,13 @@ def asian(dates: int, spot: float = 100.0, strike: float = 100.0, rate: float = 
 
 def on_rows(made: Program, rows: np.ndarray) -> np.ndarray:
     """The outputs of a program whose first registers hold `rows`, shape (outputs, lanes); lanes at most 64."""
+    return outputs_and_sums(made, rows)[0]
+
+
+def outputs_and_sums(made: Program, rows: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """The outputs of `on_rows`, and the sums over its lanes, shape (sums,)."""
     code = prepare(made)
-    registers = np.full((code.rows, 72), 777.0)
+    registers, sums = np.full((code.rows, 72), 777.0), np.full((1, code.sums), 777.0)
     registers[: len(rows), : rows.shape[1]] = rows
-    forward(registers, code.code, code.scalars, 64)
-    return registers[code.outputs, : rows.shape[1]]
+    forward(registers, code.code, code.scalars, 64, rows.shape[1], sums)
+    return registers[code.outputs, : rows.shape[1]], sums[0]

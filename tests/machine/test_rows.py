@@ -6,20 +6,15 @@ import numba
 import numpy as np
 import pytest
 
-from mcx.machine.jit import COMPILED
-from mcx.machine.rows import borrowed, wide_vectors
+from mcx.machine.jit import COMPILED, jit
+from mcx.machine.rows import wide_vectors
 
 pytestmark = pytest.mark.skipif(not COMPILED, reason="nothing is compiled")
 
 
-@numba.njit
-def owned_rows(table, first, last):
-    return table[first:last]
-
-
-@numba.njit
-def lent_rows(table, first, last):
-    return borrowed(table)[first:last]
+@jit
+def rows_between(table, first, last):
+    return table[first:last].sum()
 
 
 @numba.njit
@@ -28,13 +23,12 @@ def doubled(x):
     return 2.0 * x
 
 
-def test_views_of_what_is_borrowed_are_not_counted():
-    """They have the same values, shape and strides, also where rows lie apart; only owned ones are counted."""
-    table = np.random.default_rng(70512).normal(size=(6, 9))[:, :5]
-    owned, lent = owned_rows(table, 1, 4), lent_rows(table, 1, 4)
-    np.testing.assert_array_equal(lent, table[1:4])
-    assert lent.strides == owned.strides == table.strides
-    assert ["NRT_incref" in str(rows.inspect_llvm()) for rows in (owned_rows, lent_rows)] == [True, False]
+def test_views_of_rows_are_not_counted():
+    """A kernel holds no reference counts; numba's usual way does."""
+    usual = numba.njit(rows_between.py_func)
+    table = np.random.default_rng(70512).normal(size=(6, 9))
+    assert rows_between(table, 1, 4) == usual(table, 1, 4)
+    assert ["NRT_incref" in str(rows.inspect_llvm()) for rows in (usual, rows_between)] == [True, False]
 
 
 def test_wide_vectors_are_asked_for():

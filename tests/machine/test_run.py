@@ -14,10 +14,10 @@ from scipy.special import ndtr
 from mcx.machine import jit
 from mcx.machine.jit import COMPILED
 from mcx.machine.prepare import prepare
-from mcx.machine.run import COMPILING, NonFinitePath, Stream, draws, levels, run, values_by_path
+from mcx.machine.run import COMPILING, NonFinitePath, NonFiniteSum, Stream, draws, levels, run, values_by_path
 from mcx.machine.sizes import batch_for, cost, lanes_for
 from mcx.tape.ops import Op
-from mcx.tape.program import Program
+from mcx.tape.program import ALONE, Program
 
 PATHS = many(20_011)  # neither a whole number of groups nor of blocks
 
@@ -25,7 +25,14 @@ PATHS = many(20_011)  # neither a whole number of groups nor of blocks
 def digits(sums) -> tuple:
     """Everything a run found, to the last bit."""
     noted = [(snap.paths, snap.mean.tobytes(), snap.m2.tobytes()) for snap in sums.snapshots]
-    return sums.paths, sums.mean.tobytes(), sums.m2.tobytes(), noted
+    parts = sums.batch_paths.tobytes(), sums.sums.tobytes()
+    return sums.paths, sums.mean.tobytes(), sums.m2.tobytes(), noted, parts
+
+
+def summed(made: Program) -> Program:
+    """The same program with three sums: of its first output, of its square, and of a number."""
+    return replace(made, sums=np.array([(row, other, len(made.code)) for row, other in (
+        (made.outputs[0], ALONE), (made.outputs[0], made.outputs[0]), (-1, ALONE))], dtype=np.int32))
 
 
 def log_above(threshold: float) -> Program:
@@ -70,14 +77,14 @@ def test_one_date_is_the_black_formula():
 def test_no_digit_depends_on_lanes_or_threads(lanes: int, threads: int):
     """The sums are the same to the last bit for every size of block and number of threads."""
     asked = {"seed": SEED, "paths": PATHS, "snapshots": (PATHS // 4, PATHS // 2)}
-    made = asian(5)
+    made = summed(asian(5))
     assert digits(run(made, **asked, lanes=lanes, threads=threads)) == digits(run(made, **asked))
 
 
 @pytest.mark.parametrize("batch", [64, 1024, 1 << 20])
 def test_no_digit_depends_on_batches(batch: int, monkeypatch: pytest.MonkeyPatch):
     """The sums are the same to the last bit wherever a batch ends."""
-    made, asked = asian(3), {"seed": SEED, "paths": many(5000), "snapshots": (many(2500),)}
+    made, asked = summed(asian(3)), {"seed": SEED, "paths": many(5000), "snapshots": (many(2500),)}
     expected = digits(run(made, **asked))
     monkeypatch.setattr("mcx.machine.run.batch_for", lambda code, lanes: batch)
     assert digits(run(made, **asked, lanes=64)) == expected
@@ -114,7 +121,33 @@ def test_snapshots_are_the_shorter_runs():
     made, quarter, half = asian(4), 64 * 20, 64 * 40
     sums = run(made, seed=SEED, paths=64 * 80, snapshots=(half, quarter))
     for snap, paths in zip(sums.snapshots, (quarter, half), strict=True):
-        assert digits(run(made, seed=SEED, paths=paths)) == (paths, snap.mean.tobytes(), snap.m2.tobytes(), [])
+        assert digits(run(made, seed=SEED, paths=paths))[:4] == (paths, snap.mean.tobytes(), snap.m2.tobytes(), [])
+
+
+@pytest.mark.parametrize("paths", [PATHS, 640, 65, 1])
+def test_sums_of_fixed_parts(paths: int):
+    """Group g of 64 paths belongs to part g mod 64, wherever the run begins; each part's sums are exact."""
+    made = summed(asian(3))
+    first = 64 * 5
+    values = levels(made, seed=SEED, numbers=range(first, first + paths))[:, 0]
+    part = (first + np.arange(paths)) // 64 % 64
+    sums = run(made, seed=SEED, first_path=first, paths=paths)
+    np.testing.assert_array_equal(sums.batch_paths, np.bincount(part, minlength=64))
+    exact = [[fsum(values[part == k]), fsum(values[part == k] ** 2), fsum([made.scalars[0]] * int((part == k).sum()))]
+             for k in range(64)]
+    np.testing.assert_allclose(sums.sums, exact, rtol=1e-14, atol=1e-14)
+
+
+def test_a_sum_that_is_not_finite_stops_the_run():
+    """The sum and the group of 64 paths are named; a path past the last one stops nothing."""
+    normals = draws(log_above(0.0), seed=SEED, numbers=range(500))[:, 0]
+    lowest = int(np.argmin(normals))
+    made = replace(log_above(float(normals[lowest])), sums=np.array([(0, ALONE, 2), (1, ALONE, 2)], dtype=np.int32))
+    made = replace(made, outputs=made.outputs[:1])
+    assert np.isfinite(run(made, seed=SEED, paths=lowest).sums).all()
+    with pytest.raises(NonFiniteSum, match="sum 1 is not finite") as found:
+        run(made, seed=SEED, paths=500)
+    assert (found.value.sum, found.value.first_path) == (1, lowest // 64 * 64)
 
 
 def test_constant_output():

@@ -26,6 +26,8 @@ class Case:
     recomputed: float
     agreement: str = ""
     note: str = ""
+    quantity: str = ""  # what it is, where it is not the price
+    checked_by: str = ""
 
     def __str__(self) -> str:
         return self.id

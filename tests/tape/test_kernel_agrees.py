@@ -2,13 +2,18 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 from hypothesis import given, settings
+from hypothesis import strategies as st
 from strategies import inputs_for, tapes
 
-from mcx.machine.run import Stream, draws, values_by_path
+from mcx.machine.run import Stream, draws, run, values_by_path
+from mcx.tape.ops import Op
+from mcx.tape.passes import drop_dead_code
 from mcx.tape.interpret import interpret
-from mcx.tape.program import Tape
+from mcx.tape.program import Output, Sum, Tape
 from mcx.tape.registers import lower
 
 SEED, PATHS = 6620133847715590231, 64
@@ -29,3 +34,22 @@ def test_kernel_and_interpreter_agree(tape: Tape):
         expected = np.broadcast_to(values[output.value], PATHS)
         scale = np.max(np.abs(expected[finite]), initial=1.0)
         np.testing.assert_allclose(result[finite], expected[finite], rtol=1e-9, atol=1e-9 * scale)
+
+
+@given(tapes(), st.data())
+def test_sums_agree(tape: Tape, data: st.DataObject):
+    """The sums of any values of a random tape, and of products of two, are those over the interpreter's values, also
+    once dead code is gone."""
+    value = st.integers(0, len(tape.instructions) - 1)
+    sums = data.draw(st.lists(st.builds(Sum, value, st.none() | value), min_size=1, max_size=6))
+    first = next(number for number, step in enumerate(tape.instructions) if step.op is Op.NORMAL)
+    tape = drop_dead_code(replace(tape, outputs=(Output("z", first),), sums=tuple(sums)))
+    leaves = inputs_for(tape, 1, seed=4400917265833)[0]
+    program = lower(tape, leaves)
+    drawn = draws(program, seed=SEED, stream=Stream.MAIN, numbers=np.arange(PATHS)).T
+    values = interpret(tape, leaves, drawn[: tape.normals], drawn[tape.normals :])
+    expected = [np.prod([np.broadcast_to(values[k], PATHS) for k in part.factors], axis=0) for part in tape.sums]
+    if np.isfinite(expected).all():
+        found = run(program, seed=SEED, paths=PATHS).sums[0]
+        scale = np.abs(expected).sum(axis=1).max(initial=1.0)
+        np.testing.assert_allclose(found, np.sum(expected, axis=1), rtol=1e-9, atol=1e-9 * scale)

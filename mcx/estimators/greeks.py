@@ -1,0 +1,290 @@
+"""How a contract's value moves: every sensitivity with its error and the estimator that gave it.
+
+Which estimators are valid is decided by the tape. Among the valid ones a pilot on its own stream chooses, for each asset's
+delta, each vol curve and so on, the one with the smallest variance times cost; costs come from a fixed table, so that
+one seed has one answer.
+"""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable, Iterator, Mapping
+from dataclasses import dataclass, replace
+from itertools import groupby
+
+import numpy as np
+
+from mcx.checked.market import Market
+from mcx.estimators.batches import FEWEST_PATHS, Batches, Sampling
+from mcx.estimators.differentiate import Bound, Coefficients, pairs_of
+from mcx.estimators.estimate import Estimate
+from mcx.estimators.ladder import Point, Step, grid, ladder
+from mcx.estimators.methods import PATHWISE, Method, methods
+from mcx.estimators.plan import Plan, Precision, plan
+from mcx.estimators.price import Ready
+from mcx.estimators.revalue import Revaluer, central_differences, impossible, second_differences, step_of
+from mcx.estimators.sensitivities import Curvature, Sensitivity, first_order, second_order
+from mcx.estimators.theta import between, theta
+from mcx.leaves.jacobian import Input, inputs, without_derivative
+from mcx.machine.run import Notice, Stream, values_by_path
+from mcx.tape.smooth import Jump
+
+PILOT_PATHS = 1 << 14
+NEAR = 1.0 / 12.0  # years
+ESTIMATORS = ("auto", "pathwise", "likelihood", "mixed")
+REVALUATION = "revaluation"
+
+
+@dataclass(frozen=True, slots=True)
+class Wish:
+    """What is asked for. `assets` () are all; no `spot_moves`: no ladder; no `vol_moves`: no grid."""
+
+    estimator: str = "auto"
+    bump: float | None = None
+    assets: tuple[str, ...] = ()
+    spot_moves: tuple[float, ...] = ()
+    vol_moves: tuple[float, ...] = ()
+
+
+@dataclass(frozen=True, slots=True)
+class Value:
+    """A sensitivity in the units of the trade, with what gave it."""
+
+    what: Sensitivity | Curvature
+    estimate: Estimate
+    estimator: str
+    note: str = ""
+
+
+@dataclass(frozen=True, slots=True)
+class Found:
+    """Everything that a run found; `refused` are sensitivities with the reason why there is no value."""
+
+    price: Estimate
+    values: tuple[Value, ...]
+    refused: tuple[tuple[Sensitivity | Curvature, str], ...]
+    comparison: tuple[Value, ...]
+    choices: tuple[str, ...]
+    jumps: tuple[Jump, ...]
+    ladder: tuple[Step, ...]
+    grid: tuple[Point, ...]
+    notes: tuple[str, ...]
+    plan: Plan
+    seed: int
+    seconds: float
+
+
+def sensitivities(
+    ready: Ready,
+    market: Market,
+    wish: Wish,
+    asked: Precision,
+    *,
+    seed: int,
+    threads: int | None = None,
+    progress: Callable[[int, int, float], None] | None = None,
+    notice: Notice | None = None,
+) -> Found:
+    """All sensitivities of a contract that were asked for.
+
+    Raises Refusal where the estimator asked for is not valid, and NonFinitePath, NonFiniteSum, KeyboardInterrupt as
+    `Sampling.sums` does.
+    """
+    return _Run(ready, market, wish, asked, seed, threads, progress, notice).found()
+
+
+class _Run:
+    """One contract's sensitivities under way."""
+
+    def __init__(self, ready: Ready, market: Market, wish: Wish, asked: Precision, seed: int, threads: int | None,
+                 progress: Callable[[int, int, float], None] | None, notice: Notice | None):
+        self.ready, self.market, self.wish = ready, market, wish
+        self.contract = ready.dated.contract
+        self.numbers = inputs(market, self.contract)
+        self.lines = [line for line in first_order(self.numbers, self.contract) if self._wanted(line.subject)]
+        self.curvatures = [line for line in second_order(self.numbers, self.contract) if self._wanted(line.subject)]
+        self.methods = methods(ready, market, wish.estimator)
+        self.pilot = Sampling(seed, PILOT_PATHS, Stream.PILOT, threads, notice=notice)
+        self.bound: dict[str, Bound] = {}
+        self.plan = self._plan(asked)
+        counted = progress and (lambda done, _, error: progress(done, self.plan.paths, error))
+        self.sampling = Sampling(seed, self.plan.paths, Stream.MAIN, threads, counted, notice)
+        self.revaluer = Revaluer.of(ready.unrolled.tape, self.contract)
+        self.piloted: dict[str, tuple[Coefficients, Batches, Batches]] = {}
+        self.done: dict[str, tuple[Batches, Batches]] = {}
+        self.base: tuple[Batches, Estimate] | None = None  # the price of the main run
+        self.choices: list[str] = []
+        self.refused: list[tuple[Sensitivity | Curvature, str]] = []
+
+    def found(self) -> Found:
+        begun = time.perf_counter()
+        kinks = {self.numbers.index(number): reason
+                 for number, reason in without_derivative(self.market, self.contract).items()}
+        values = [*self._first(kinks), *self._second()]
+        base, price = self.base or self.revaluer.price(self.market, self.sampling)
+        values.append(self._theta(base))
+        comparison, notes = self._comparison(base)
+        rungs = self._ladder(base)
+        points = grid(self.revaluer, self.market, self._moving(), self.wish.spot_moves or (0.0,), self.wish.vol_moves,
+                      self.sampling, base) if self.wish.vol_moves else ()
+        notes += [*between(self.ready.dated), *self._near(values)]
+        return Found(price, tuple(values), tuple(self.refused), tuple(comparison), tuple(self.choices),
+                     self.methods.jumps, rungs, points, tuple(notes), self.plan, self.sampling.seed, time.perf_counter() - begun)
+
+    def _wanted(self, subject: str) -> bool:
+        """Whether an asset's or a pair's line was asked for; a currency's always is."""
+        named = [name for name in subject.split("/") if name in self.contract.assets]
+        return not self.wish.assets or all(name in self.wish.assets for name in named)
+
+    def _plan(self, asked: Precision) -> Plan:
+        program = replace(self.ready.program, outputs=self.ready.program.outputs[:1])
+
+        def prices(paths: int) -> np.ndarray:
+            return values_by_path(program, paths=paths, seed=self.pilot.seed, stream=Stream.PILOT,
+                                  threads=self.pilot.threads)[0]
+
+        def seconds_for(paths: int) -> float:
+            begun = time.perf_counter()
+            for method in self.methods.valid:
+                self._bound(method).derivatives(replace(self.pilot, paths=max(paths, FEWEST_PATHS)))
+            return time.perf_counter() - begun
+
+        found = plan(asked, prices, seconds_for, exact=program.outputs[0] < 0)
+        return replace(found, paths=max(found.paths, FEWEST_PATHS))
+
+    def _bound(self, method: Method) -> Bound:
+        """A method's tape on the market as it stands."""
+        if method.name not in self.bound:
+            self.bound[method.name] = method.engine.on(self.market)
+        return self.bound[method.name]
+
+    def _pilot(self, method: Method) -> tuple[Coefficients, Batches, Batches]:
+        """The coefficients of a method's controls, and what it finds on the pilot; each runs once."""
+        if method.name not in self.piloted:
+            found = self._bound(method).derivatives(self.pilot)
+            coefficients = found.fitted()
+            self.piloted[method.name] = (coefficients, *found.with_controls(coefficients))
+        return self.piloted[method.name]
+
+    def _main(self, method: Method) -> tuple[Batches, Batches]:
+        """First and second derivatives by a method, from the main run."""
+        if method.name not in self.done:
+            found = self._bound(method).derivatives(self.sampling)
+            self.done[method.name] = found.with_controls(self._pilot(method)[0])
+            self.base = Batches(found.paths, found.base), found.price
+        return self.done[method.name]
+
+    def _first(self, kinks: Mapping[int, str]) -> Iterator[Value]:
+        """The first-order sensitivities; all lines of one asset's delta, or of one curve, by one estimator, so that
+        the nodes add up to the whole."""
+        size = len(self.numbers)
+        for (kind, subject), group in groupby(self.lines, key=self._family):
+            lines = list(group)
+            whole = lines[-1].weights(size)
+            method = self._choice(f"{lines[0].name} of {subject}", kind, lambda pilot: pilot[1].estimate(whole))
+            for line in lines:
+                reason = next((kinks[column] for column in line.columns if column in kinks), "")
+                if method is None:
+                    reason = self.methods.why_not(kind)
+                if reason:
+                    self.refused.append((line, reason))
+                else:
+                    yield Value(line, self._main(method)[0].estimate(line.weights(size)), method.name)
+
+    def _family(self, line: Sensitivity) -> tuple[str, str]:
+        return self.numbers[line.columns[0]].kind, line.subject
+
+    def _second(self) -> Iterator[Value]:
+        every = pairs_of(len(self.contract.assets))
+        for line in self.curvatures:
+            weights = np.zeros(len(every))
+            weights[every.index(line.assets)] = line.factor
+            method = self._choice(f"{line.name} of {line.subject}", "gamma", lambda pilot: pilot[2].estimate(weights))
+            if method is None:
+                self.refused.append((line, self.methods.why_not("gamma")))
+            else:
+                yield Value(line, self._main(method)[1].estimate(weights), method.gamma)
+
+    def _choice(self, words: str, kind: str, estimate: Callable[[tuple], Estimate]) -> Method | None:
+        """The valid estimator with the smallest variance times cost in the pilot; None where none is valid."""
+        valid = self.methods.for_kind(kind)
+        if len(valid) < 2:
+            return valid[0] if valid else None
+        burden = {method.name: estimate(self._pilot(method)).standard_error**2 * self._bound(method).cost() for method in valid}
+        best = min(valid, key=lambda method: burden[method.name])
+        others = ", ".join(f"{_times(burden[method.name], burden[best.name])} {method.name}" for method in valid
+                           if method is not best)
+        self.choices.append(f"{words}: {best.name}; variance times cost in the pilot: {others}")
+        return best
+
+    def _theta(self, base: Batches) -> Value:
+        line = Sensitivity("theta", "", "1 day", f"{self.contract.currency} per calendar day", (), ())
+        estimate = theta(self.ready, self.market, self.sampling, base).estimate(np.array([self.contract.size]))
+        return Value(line, estimate, REVALUATION, "the document read one calendar day on")
+
+    def _near(self, values: list[Value]) -> Iterator[str]:
+        """A word about a first date so near that likelihood ratios scatter."""
+        first = self.ready.unrolled.grid.times[1:2]
+        if first and first[0] < NEAR and any(value.what.name == "delta" and value.estimator != PATHWISE for value in values):
+            yield (f"the first simulated date is only {365.0 * first[0]:.3g} days away: the error of a likelihood ratio's "
+                   f"delta grows as the root of that time shrinks, that of its gamma as the time itself does")
+
+    def _moving(self) -> list[Input]:
+        """The numbers that a ladder or a grid moves: spots and vols of the assets asked for."""
+        return [number for number in self.numbers if number.kind in ("spot", "vol") and self._wanted(number.subject)]
+
+    def _comparison(self, base: Batches) -> tuple[list[Value], list[str]]:
+        """The same sensitivities by revaluation, where a bump was asked for."""
+        size, notes, values = self.wish.bump, [], []
+        if size is None:
+            return values, notes
+        steps = {}
+        for column, number in enumerate(self.numbers):
+            if any(column in line.columns for line in self.lines):
+                step = step_of(number, size)
+                reasons = (impossible(self.market, self.contract, {number: side * step}) for side in (1.0, -1.0))
+                reason = next(filter(None, reasons), "")
+                if reason:
+                    notes.append(f"no revaluation for the {number}: moved by {step:g}, {reason}")
+                else:
+                    steps[number] = step
+        found = central_differences(self.revaluer, self.market, steps, self.sampling)
+        at = {self.numbers.index(number): column for column, number in enumerate(steps)}
+        for line in self.lines:
+            if all(column in at for column in line.columns):
+                weights = np.zeros(len(at))
+                weights[[at[column] for column in line.columns]] = line.factors
+                values.append(Value(line, found.estimate(weights), REVALUATION, _bumped(self.numbers[line.columns[0]], size)))
+        if self.curvatures:
+            pairs = [tuple(self.numbers[column] for column in line.columns) for line in self.curvatures]
+            second = second_differences(self.revaluer, self.market, pairs, size, self.sampling, base)
+            for number, line in enumerate(self.curvatures):
+                weights = np.zeros(len(pairs))
+                weights[number] = line.factor
+                values.append(Value(line, second.estimate(weights), REVALUATION, _bumped(pairs[number][0], size)))
+        return values, notes
+
+    def _ladder(self, base: Batches) -> tuple[Step, ...]:
+        if not self.wish.spot_moves:
+            return ()
+        spots = [column for column, number in enumerate(self.numbers)
+                 if number.kind == "spot" and self._wanted(number.subject)]
+        every = np.isin(np.arange(len(self.numbers)), spots).astype(float)
+        method = self._choice("deltas of the ladder", "spot", lambda pilot: pilot[1].estimate(every))
+
+        def deltas(market: Market) -> Batches | None:
+            if method is None:
+                return None
+            found = method.engine.on(market).derivatives(self.sampling).with_controls(self._pilot(method)[0])[0]
+            return Batches(found.paths, found.means[:, spots])
+
+        return ladder(self.revaluer, self.market, self._moving(), self.wish.spot_moves, self.sampling, base, deltas)
+
+
+def _times(burden: float, best: float) -> str:
+    return f"{burden / best:.3g} times as much for" if best > 0.0 else "not 0 for"
+
+
+def _bumped(number: Input, size: float) -> str:
+    step = step_of(number, size)
+    return f"moved by ±{100 * size:.3g} %" if number.kind in ("spot", "forward") else f"moved by ±{step:g}"

@@ -1,0 +1,144 @@
+"""Which estimators of sensitivities are valid for a contract, and why the others are not: the tape decides."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+from mcx.checked.contract import Contract
+from mcx.checked.market import Market
+from mcx.estimators.differentiate import Differentiator, without_first_levels
+from mcx.estimators.price import Ready
+from mcx.faults import Refusal
+from mcx.leaves.market_map import MarketMap
+from mcx.tape.ops import Op
+from mcx.tape.passes import drop_dead_code
+from mcx.tape.program import Instruction, Leaf, LeafKind, Tape
+from mcx.tape.registers import uniform_values
+from mcx.tape.smooth import Jump, jumps, payments
+
+PATHWISE, LIKELIHOOD, MIXED = "pathwise", "likelihood ratio", "mixed"
+GAMMAS = {PATHWISE: "likelihood ratio of the pathwise delta", LIKELIHOOD: "second-order likelihood ratio",
+          MIXED: "mixed: likelihood ratio of the pathwise delta, second-order where payments jump"}
+COMPARED = (Op.LT, Op.LE, Op.EQ, Op.NE)
+SINGULAR = 1e-14  # an own variance below this share of the whole
+MOST_DRAWS = 64  # where every payment is smooth; the variance of a likelihood ratio grows with the steps
+
+
+@dataclass(frozen=True, slots=True)
+class Method:
+    """A valid estimator. `refusals`: kinds of numbers, and 'gamma', for which it is not, with the reason."""
+
+    name: str
+    engine: Differentiator
+    refusals: dict[str, str]
+
+    @property
+    def gamma(self) -> str:
+        return GAMMAS[self.name]
+
+
+@dataclass(frozen=True, slots=True)
+class Methods:
+    """The valid estimators, the pathwise one first, and what makes payments jump."""
+
+    valid: tuple[Method, ...]
+    jumps: tuple[Jump, ...]
+    reason: str  # why there is none
+
+    def for_kind(self, kind: str) -> tuple[Method, ...]:
+        return tuple(method for method in self.valid if kind not in method.refusals)
+
+    def why_not(self, kind: str) -> str:
+        """Why no estimator gives this kind of number."""
+        return next((method.refusals[kind] for method in self.valid if kind in method.refusals), self.reason)
+
+
+def methods(ready: Ready, market: Market, asked: str) -> Methods:
+    """The valid estimators among those asked for ('auto' for all). Raises Refusal where what was asked for is not
+    valid, with the condition that forbids it."""
+    contract, unrolled = ready.dated.contract, ready.unrolled
+    price = unrolled.tape.outputs[0]
+    tape = without_first_levels(drop_dead_code(replace(unrolled.tape, outputs=(price,), sums=())))
+    values = MarketMap(market, contract).values(tape.leaves)
+    known = uniform_values(tape, values)
+    paid = payments(tape, tape.outputs[0].value)
+    found = dict(zip(paid, jumps(tape, values, paid), strict=True))
+    jumping = [payment for payment in paid if found[payment]]
+    smooth = [payment for payment in paid if not found[payment]]
+    places = tuple({(jump.kind, jump.place): jump for payment in jumping for jump in found[payment]}.values())
+    still = without_own_randomness(dict(zip(tape.leaves, values, strict=True)), contract)
+
+    def method(name: str, pathwise: list[int], likelihood: list[int]) -> Method:
+        engine = Differentiator.of(tape, unrolled.grid, contract, known, pathwise=pathwise, likelihood=likelihood,
+                                   second=not still)
+        refusals = {}
+        if likelihood and (reason := read_today(tape, known)):
+            refusals["spot"] = reason
+        if reason := still or second_order_trouble(tape, engine):
+            refusals["gamma"] = reason
+        return Method(name, engine, refusals)
+
+    reason = f"the payoff jumps, and {still}" if still else ""
+    if asked == "pathwise" and jumping:
+        raise Refusal(f"'{contract.title}': no pathwise estimate, since the payoff jumps at {_listed(places)}; such an "
+                      f"estimate would miss the jump and show a small error")
+    if asked in ("likelihood", "mixed") and still and (jumping or asked == "likelihood"):
+        raise Refusal(f"'{contract.title}': no likelihood ratio, since {still}")
+    valid = []
+    if asked != "likelihood" and not jumping:
+        valid.append(method(PATHWISE, smooth, []))
+    drawn = [payment for payment in smooth if known[payment] is None]
+    if asked in ("auto", "mixed") and jumping and drawn and not still:
+        valid.append(method(MIXED, smooth, jumping))
+    few = tape.normals + tape.uniforms <= MOST_DRAWS
+    wanted = {"pathwise": False, "likelihood": True, "mixed": not valid, "auto": bool(jumping) or few}[asked]
+    if wanted and not still:
+        valid.append(method(LIKELIHOOD, [], list(paid)))
+    return Methods(tuple(valid), places, reason)
+
+
+def without_own_randomness(values: dict[Leaf, float], contract: Contract) -> str:
+    """Why the paths have no density: an asset that does not move by itself, or as good as not; '' where all do."""
+    variances: dict[tuple[int, float], float] = {}
+    for leaf, value in values.items():
+        if leaf.kind is LeafKind.FACTOR:
+            variances[leaf.asset, leaf.end] = variances.get((leaf.asset, leaf.end), 0.0) + value**2
+    for leaf, value in values.items():
+        if leaf.kind is LeafKind.FACTOR and leaf.asset == leaf.other:
+            if value**2 <= SINGULAR * variances[leaf.asset, leaf.end]:
+                return (f"{contract.assets[leaf.asset]} has no randomness of its own between {leaf.start:.6g}y and "
+                        f"{leaf.end:.6g}y: no vol there, or a singular correlation matrix")
+    return ""
+
+
+def read_today(tape: Tape, known: Sequence[float | None]) -> str:
+    """Why a likelihood ratio by a spot would miss something: today's level is compared with one that is drawn, and moves
+    while that is held; '' where it is not."""
+    today: set[int] = set()
+    for number, step in enumerate(tape.instructions):
+        if _is_today(step) or any(k in today for k in step.operands):
+            today.add(number)
+        if step.op in COMPARED and any(k in today for k in step.operands) and known[number] is None:
+            return f"today's level is compared with a later one at {step.place}, so a move of the spot moves both"
+    return ""
+
+
+def second_order_trouble(tape: Tape, engine: Differentiator) -> str:
+    """Why there is no gamma; '' where there is one."""
+    if any(map(_is_today, tape.instructions)):
+        return "the payoff reads today's level itself beside later ones; a second derivative through both is not taken"
+    if engine.rough:
+        return ("a payment that jumps reads a continuously watched extreme itself: its second-order score has no finite "
+                "variance")
+    return ""
+
+
+def _is_today(step: Instruction) -> bool:
+    return step.op is Op.LEAF and step.payload.kind is LeafKind.FORWARD
+
+
+def _listed(found: Sequence[Jump]) -> str:
+    """Where a payoff jumps, at most three places."""
+    shown = [f"{jump.place or 'an unnamed place'} ({jump.kind})" for jump in found[:3]]
+    return ", ".join(shown) + (f" and {len(found) - 3} more" if len(found) > 3 else "")

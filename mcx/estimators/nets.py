@@ -1,0 +1,127 @@
+"""Randomised quasi-Monte Carlo: Sobol' points, scrambled several times over, in the order of a path.
+
+Each scramble alone is an unbiased estimate, and they are independent, so the error is read off their spread, with
+Student's t for so few. A scramble has a power of two of points, the first one included: only then is each coordinate,
+and each pair of them, spread as evenly as the points are meant to be (A. Owen, "On dropping the first Sobol' point",
+2022).
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass
+from enum import Enum
+
+import numpy as np
+
+from mcx.estimators.estimate import Estimate
+from mcx.faults import RequestError
+from mcx.leaves.market_map import MarketMap
+from mcx.machine.draw_plan import MOST_POINTS, DrawPlan
+from mcx.machine.orders import bridge, components
+from mcx.machine.run import Notice, ScrambleSums, Stream, run_scrambles
+from mcx.tape.program import Leaf, LeafKind, Program
+from mcx.tape.steps import Grid
+
+SCRAMBLES = 16  # more would leave each of them too few points, fewer would widen the t quantile
+FEWEST_POINTS = 64
+SAME = 1e6  # means closer than this part of one path's share are one mean
+
+
+class Order(Enum):
+    """What the first coordinates of a point decide."""
+
+    STEPS = "the steps of the path, in order"
+    BRIDGE = "its end, then the middles of what is still open"
+    COMPONENTS = "its leading principal components, then as the bridge"
+
+
+@dataclass(frozen=True, slots=True)
+class Net:
+    """`scrambles` independent scrambles of `points` points, a power of two."""
+
+    points: int
+    scrambles: int = SCRAMBLES
+
+    @property
+    def paths(self) -> int:
+        return self.points * self.scrambles
+
+
+def net_for(paths: int, scrambles: int = SCRAMBLES) -> Net:
+    """The smallest net of at least so many paths; raises RequestError where a net cannot have that few or many."""
+    fewest, most = scrambles * FEWEST_POINTS, scrambles * MOST_POINTS
+    if not fewest <= paths <= most:
+        raise RequestError(f"scrambled points are from {fewest:,} paths ({scrambles} scrambles of {FEWEST_POINTS} points) "
+                           f"to {most:,}, not {paths:,}")
+    return Net(1 << (-(-paths // scrambles) - 1).bit_length(), scrambles)
+
+
+def clock(market: MarketMap, grid: Grid) -> np.ndarray:
+    """The variance of each simulated asset's log over each step of the grid, shape (steps, assets)."""
+    leaves = [Leaf(LeafKind.VARIANCE, asset, start=start, end=end)
+              for start, end in zip(grid.times, grid.times[1:]) for asset in grid.assets]
+    return market.values(leaves).reshape(-1, len(grid.assets))
+
+
+def net_draws(net: Net, order: Order, variances: np.ndarray) -> DrawPlan:
+    """The plan of draws for a net on a contract whose `clock` is given."""
+    orders = {Order.BRIDGE: bridge, Order.COMPONENTS: components}
+    mixed = order in orders and variances.size > 0
+    return DrawPlan(net.scrambles, orders[order](variances) if mixed else None)
+
+
+def on_net(
+    program: Program,
+    net: Net,
+    plan: DrawPlan,
+    *,
+    seed: int,
+    stream: int = Stream.MAIN,
+    threads: int | None = None,
+    progress: Callable[[int, float, float], None] | None = None,
+    notice: Notice | None = None,
+) -> ScrambleSums:
+    """A program run over a net. Raises NonFinitePath, RequestError for more draws than a point has coordinates, and
+    KeyboardInterrupt where that comes before two scrambles are whole."""
+    from mcx.machine.directions import most_coordinates
+
+    if program.draws > most_coordinates():
+        raise RequestError(f"the contract draws {program.draws:,} numbers for a path, and scrambled points have at most "
+                           f"{most_coordinates():,} coordinates; take another reduction, or none")
+    return run_scrambles(program, seed=seed, plan=plan, points=net.points, stream=stream, threads=threads,
+                         progress=progress, notice=notice)
+
+
+def net_estimates(sums: ScrambleSums, scrambles: int | None = None) -> tuple[Estimate, ...]:
+    """The estimate of each output from the scrambles of a run, or the first of them; at least two."""
+    from scipy.special import stdtrit
+
+    means, squares = sums.means[:scrambles], sums.squares[:scrambles]
+    count, outputs = means.shape
+    quantile = float(stdtrit(count - 1, 0.975))
+    spread = np.sqrt(squares.mean(axis=0) / sums.points)
+    return tuple(
+        Estimate(float(means[:, k].mean()), _deviation(means[:, k], spread[k] / sums.points) / math.sqrt(count),
+                 count * sums.points, quantile)
+        for k in range(outputs)
+    )  # fmt: skip
+
+
+def _deviation(means: np.ndarray, part: float) -> float:
+    """The standard deviation of a scramble's mean, from those of all; `part`: that of one path, over the points.
+
+    Points so even that nearly every scramble has as many on each side of a jump give means that are equal, but for a
+    few: their spread alone would promise an exact result where none of 16 happened to differ. Then it is that of a
+    proportion with two more of either kind (A. Agresti, B. Coull, "Approximate is better than 'exact' for interval
+    estimation of binomial proportions", The American Statistician 52 (1998), 119-126), times the jump.
+    """
+    found = float(means.std(ddof=1))
+    counts = np.unique(np.round(means / part * SAME) if part > 0.0 else means, return_counts=True)[1]
+    odd = len(means) - int(counts.max())
+    if part == 0.0 or 2 * odd > len(means):
+        return found
+    jump = max(2.0 * part, float(np.ptp(means)))
+    share = (odd + 2) / (len(means) + 4)
+    return max(found, jump * math.sqrt(share * (1.0 - share)))

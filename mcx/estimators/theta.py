@@ -1,0 +1,53 @@
+"""Theta: the same contract, market document and paths, one calendar day on.
+
+The document is kept as it is: levels stand, and every curve is read at the time that is then left. A fixing in between
+happens at today's level, a payment in between is counted in undiscounted. The tape is the contract's own, with all its
+times a day nearer, so nothing is drawn anew.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+from mcx.checked.market import Market
+from mcx.dates.dated_contract import DatedContract, Moment
+from mcx.estimators.batches import Batches, Sampling
+from mcx.estimators.price import Ready
+from mcx.estimators.revalue import Revaluer
+from mcx.tape.unroll import unroll
+
+DAY = 1.0 / 365.0
+SAME_TIME = 1e-9
+
+
+def theta(ready: Ready, market: Market, sampling: Sampling, base: Batches) -> Batches:
+    """The price one calendar day on less the price today, in the price's unit, as a single quantity; `base` is the price
+    today on the same paths.
+
+    Watched stretches are split where the curves bend on either day, so that the bridges of both are exact; then the price
+    today is taken on that grid as well.
+    """
+    contract, tape = ready.dated.contract, ready.unrolled.tape
+    if ready.dated.watches:
+        nodes = ready.market.nodes()
+        tape = unroll(ready.dated, nodes=sorted({*nodes, *(node + DAY for node in nodes)})).tape
+        base, _ = Revaluer.of(tape, contract).price(market, sampling)
+    tomorrow, _ = Revaluer.of(tape, contract, later=DAY).price(market, sampling)
+    return Batches(base.paths, tomorrow.means - base.means)
+
+
+def between(dated: DatedContract) -> Iterator[str]:
+    """What happens after the valuation date and up to one calendar day on, in words."""
+    for moment in dated.moments:
+        if SAME_TIME < moment.day.time <= DAY + SAME_TIME:
+            yield f"theta: {_names(moment)} on {moment.day} lies in between and is taken at today's levels"
+    due = {day: pay for moment in dated.moments for event in moment.events for pay, day in event.due.items()}
+    for day, pay in due.items():
+        if SAME_TIME < day.time <= DAY + SAME_TIME:
+            yield f"theta: the payment '{pay.leg}' on {day} lies in between and is counted in"
+
+
+def _names(moment: Moment) -> str:
+    found = [update.running.name for update in moment.updates]
+    found += [event.event.name or "a payment's date" for event in moment.events]
+    return ", ".join(dict.fromkeys(f"'{name}'" for name in found))

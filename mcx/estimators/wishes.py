@@ -1,0 +1,56 @@
+"""What may be asked about sensitivities, read from texts and numbers."""
+
+from __future__ import annotations
+
+import math
+import re
+from collections.abc import Sequence
+
+from mcx.estimators.greeks import ESTIMATORS
+from mcx.faults import RequestError, did_you_mean
+
+SHARE = re.compile(r"([+-]?[0-9]*\.?[0-9]+(?:[eE][+-]?[0-9]+)?)\s*(%|bp)?")
+UNITS = {"%": 1e-2, "bp": 1e-4}
+LARGEST_BUMP = 0.5
+MOST_MOVES = 101
+
+
+def estimator_of(name: str) -> str:
+    """The name of an estimator; raises RequestError for any other."""
+    if name not in ESTIMATORS:
+        raise RequestError(f"there is no estimator '{name}'{did_you_mean(str(name), ESTIMATORS)}; there are "
+                           f"{', '.join(ESTIMATORS)}")
+    return name
+
+
+def bump_of(size: str | float | None) -> float | None:
+    """How far numbers are moved for a revaluation, as a share; raises RequestError for what moves nothing or too far."""
+    if size is None:
+        return None
+    share = _share(size)
+    if share is None or not 0.0 < share <= LARGEST_BUMP:
+        raise RequestError(f"'bump' is a size above 0 and up to {LARGEST_BUMP:.0%}, as '1%', not '{size}'")
+    return share
+
+
+def moves_of(moves: Sequence[str | float], what: str) -> tuple[float, ...]:
+    """Moves of all spots, or of all vols, in rising order; raises RequestError for what is no move."""
+    found = []
+    for move in moves:
+        share = _share(move)
+        if share is None:
+            raise RequestError(f"the {what} moves are sizes such as '-5%', '0' or '2.5%', not '{move}'")
+        if what == "spot" and share <= -1.0:
+            raise RequestError(f"the spot cannot move by '{move}': it stays above 0")
+        found.append(share)
+    if len(set(found)) < len(found):
+        raise RequestError(f"one of the {what} moves is named twice")
+    if len(found) > MOST_MOVES:
+        raise RequestError(f"at most {MOST_MOVES} {what} moves at a time, not {len(found)}")
+    return tuple(sorted(found))
+
+
+def _share(size: str | float) -> float | None:
+    found = SHARE.fullmatch(str(size).strip())
+    share = float(found[1]) * UNITS.get(found[2], 1.0) if found and not isinstance(size, bool) else math.nan
+    return share if math.isfinite(share) else None

@@ -1,0 +1,119 @@
+"""Path orders: which features of an asset's path the first coordinates of a point decide.
+
+Both work in the variance clock: an asset's normals times the roots of its steps' variances are the increments of a
+Brownian path. An order is an orthogonal map from the coordinates' normals to those normals.
+
+*Bridge*: the first coordinate is the end of the path, each later one the point that halves the variance of a stretch
+whose ends are known, the most uncertain first. In terms of the normals of stretches such a step turns two of
+them by an angle, so that a path of n steps takes n - 1 turns.
+
+*Components*: the first coordinates are the leading principal components of the path at the dates (P. Acworth, M.
+Broadie, P. Glasserman, "A comparison of some Monte Carlo and quasi-Monte Carlo techniques for option pricing", 1998).
+LEADING of them carry 95 % of the variance; what is left is taken in the order of a bridge, bent so that it is
+orthogonal to them. That is a bridge after a map of rank LEADING: its cost does not grow with the square of the
+number of steps, as that of all components would, and no component beyond was seen to reduce an error.
+"""
+
+from __future__ import annotations
+
+from heapq import heappop, heappush
+
+import numpy as np
+
+from mcx.machine.draw_plan import LEADING, PathOrder
+
+COMPONENT_STEPS = 512  # beyond, the eigenvectors take longer to find than many a run
+
+
+def bridge(clock: np.ndarray) -> PathOrder:
+    """The order of a Brownian bridge; clock (steps, assets): the variance of each asset's log over each step."""
+    return _order(clock, components=False)
+
+
+def components(clock: np.ndarray) -> PathOrder:
+    """The order of principal components, of at most COMPONENT_STEPS steps; that of a bridge beyond. See `bridge`."""
+    return _order(clock, components=1 < len(clock) <= COMPONENT_STEPS)
+
+
+def _order(clock: np.ndarray, components: bool) -> PathOrder:
+    steps, assets = clock.shape
+    coordinates = np.empty((steps, assets), dtype=np.int32)
+    bent = np.zeros((2, assets, steps, LEADING)) if components else np.empty((2, 0, 0, LEADING))
+    pairs, turns = [], []
+    for asset in range(assets):
+        variances = _positive(clock[:, asset])
+        turned, angles = _halve(variances)
+        first = np.concatenate([[0], turned[:, 1]])  # by rank: the normal that the coordinate begins as
+        coordinates[first, asset] = np.arange(steps) * assets + asset
+        pairs.append(turned * assets + asset)
+        turns.append(angles)
+        if components:
+            wanted = _turned_back(_leading(variances), turned, angles)[first]
+            bent[:, asset, first] = _reflections(wanted)
+    return PathOrder(coordinates.ravel(), *bent, np.concatenate(pairs).astype(np.int32), np.concatenate(turns))
+
+
+def _positive(variances: np.ndarray) -> np.ndarray:
+    """The variances, small where they are zero: any clock gives standard normals, and those are multiplied by 0."""
+    smallest = 1e-9 * variances.mean()
+    return np.maximum(variances, smallest if smallest > 0.0 else 1.0)
+
+
+def _halve(variances: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Stretches halved, the most uncertain first: of each the first step and that of its second half, (steps - 1, 2);
+    and the roots of the shares of variance of both halves, (steps - 1, 2)."""
+    known = np.concatenate([[0.0], np.cumsum(variances)])
+    pairs, turns = [], []
+    waiting: list[tuple[float, int, int, int]] = []
+
+    def wait(start: int, end: int) -> None:
+        if end - start > 1:
+            middle = start + 1 + int(np.argmin(np.abs(known[start + 1 : end] - 0.5 * (known[start] + known[end]))))
+            share = (known[middle] - known[start]) * (known[end] - known[middle]) / (known[end] - known[start])
+            heappush(waiting, (-float(f"{share:.12e}"), start, middle, end))  # equal steps come in order of time
+
+    wait(0, len(variances))
+    while waiting:
+        _, start, middle, end = heappop(waiting)
+        first = (known[middle] - known[start]) / (known[end] - known[start])
+        pairs.append((start, middle))
+        turns.append((np.sqrt(first), np.sqrt(1.0 - first)))
+        wait(start, middle)
+        wait(middle, end)
+    return np.array(pairs, dtype=np.int64).reshape(-1, 2), np.array(turns).reshape(-1, 2)
+
+
+def _leading(variances: np.ndarray) -> np.ndarray:
+    """The normals of the leading principal components of the path, shape (steps, at most LEADING); to 10 digits, so
+    that nothing hangs on the order in which a library adds: whatever they are, the map is made orthogonal."""
+    times = np.cumsum(variances)
+    values, vectors = np.linalg.eigh(np.minimum.outer(times, times))
+    values, vectors = values[::-1][:LEADING], vectors[:, ::-1][:, :LEADING]
+    return np.round(np.diff(vectors, axis=0, prepend=0.0) * np.sqrt(values) / np.sqrt(variances)[:, None], 10)
+
+
+def _turned_back(normals: np.ndarray, pairs: np.ndarray, turns: np.ndarray) -> np.ndarray:
+    """What a bridge makes these normals of; a turn is its own inverse."""
+    normals = normals.copy()
+    for (i, j), (c, s) in zip(pairs[::-1], turns[::-1], strict=True):
+        normals[i], normals[j] = c * normals[i] + s * normals[j], s * normals[i] - c * normals[j]
+    return normals
+
+
+def _reflections(wanted: np.ndarray) -> np.ndarray:
+    """left and right, each (steps, LEADING): 1 - left right' is orthogonal and takes the first unit vectors to the
+    columns of `wanted`, but for their signs, which a normal law does not see.
+
+    A product of reflections (A. Householder, 1958), multiplied out.
+    """
+    rest = wanted.copy()
+    left, right = np.zeros((2, len(wanted), LEADING))
+    for k in range(wanted.shape[1]):
+        mirror = np.zeros(len(wanted))
+        mirror[k:] = rest[k:, k]
+        mirror[k] += np.copysign(np.linalg.norm(mirror), mirror[k])
+        mirror /= np.linalg.norm(mirror)
+        rest -= 2.0 * np.outer(mirror, mirror @ rest)
+        left[:, k] = 2.0 * (mirror - left @ (right.T @ mirror))
+        right[:, k] = mirror
+    return np.stack([left, right])

@@ -1,0 +1,90 @@
+"""The terminal view of `mcx greeks`."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+
+from mcx.report.greek_results import Greek, GreeksResult, Rung
+from mcx.report.terminal import Page, decimals, fixed
+
+JUMP = "jump"
+
+
+def show_greeks(result: GreeksResult, page: Page) -> None:
+    """The sensitivities, what they were taken by, and the ladders."""
+    percent = result.notional is not None
+    factor, unit = (100.0, "%") if percent else (1.0, f"{result.currency} per unit")
+    places = decimals(result.standard_error * factor, 2, 2 if percent else 4)
+    page.line(f"{result.contract} ({result.payoff})", style="bold")
+    page.named((
+        ("valued on", result.valuation or "time 0"),
+        ("price", f"{fixed(result.price * factor, places)} {unit}, standard error "
+                  f"{fixed(result.standard_error * factor, places)}"),
+        ("paths", f"{result.paths:,} in {result.seconds:.2f} s; asked for: {result.planned.asked}"),
+        ("seed", f"{result.seed}; variance reduction: {result.reduction}; estimator asked for: {result.estimator}"),
+    ))
+    page.heading("sensitivities (sampling error only)")
+    page.table(("", "value", "error", "unit", "by"), (_row(greek, greek.estimator) for greek in result.greeks), last=2)
+    if result.refused:
+        page.heading("not given")
+        said: dict[str, list[str]] = {}
+        for each in result.refused:
+            said.setdefault(each.reason, []).append(" ".join(filter(None, (each.name, each.asset, each.tenor))))
+        page.items(f"{', '.join(names)}: {reason}" for reason, names in said.items())
+    if result.comparison:
+        page.heading("for comparison: revaluation on the same random numbers, biased by the size of the move")
+        page.table(("", "value", "error", "unit", ""), (_row(greek, greek.note) for greek in result.comparison), last=2)
+    if result.jumps:
+        page.heading("the payoff jumps here: no pathwise estimate of the payments behind it")
+        page.items(f"{jump.kind} at {jump.place or 'an unnamed place'}" for jump in result.jumps)
+    if result.ladder:
+        page.heading("spots moved together, same random numbers")
+        heads = [f"delta {delta.asset}" for delta in result.ladder[0].deltas]
+        page.table(("spot", unit, "change", "error", *heads, ""),
+                   (_rung(rung, factor, places) for rung in result.ladder), words=0, last=1)
+    if result.grid:
+        _grid(result, factor, places, page)
+    for title, texts in (("choice of estimators", result.choices), ("warnings", result.warnings),
+                         ("assumptions", result.assumptions), ("not in the model", result.limits),
+                         ("read it with care", result.cautions)):
+        if texts:
+            page.heading(title)
+            page.items(texts)
+
+
+def _row(greek: Greek, words: str) -> tuple[str, ...]:
+    places = decimals(greek.standard_error, 2, 2)
+    said = words if greek.resolved else f"{words}; not resolved"
+    name = " ".join(filter(None, (greek.name, greek.asset, greek.tenor)))
+    return name, fixed(greek.value, places), fixed(greek.standard_error, places), greek.unit, said
+
+
+def _rung(rung: Rung, factor: float, places: int) -> tuple[str, ...]:
+    deltas = (f"{fixed(delta.value, decimals(delta.standard_error, 2, 2))} ± "
+              f"{fixed(delta.standard_error, decimals(delta.standard_error, 2, 2))}" for delta in rung.deltas)
+    jump = f"{JUMP} above: {', '.join(rung.jumps)}" if rung.jumps else ""
+    return (move(rung.spot_move), fixed(rung.price * factor, places), fixed(rung.change, 2),
+            fixed(rung.change_standard_error, 2), *deltas, jump)
+
+
+def _grid(result: GreeksResult, factor: float, places: int, page: Page) -> None:
+    page.heading("price by move of all spots (down) and of all vols (across), same random numbers")
+    vols: Sequence[float] = result.vol_moves
+    at = {(point.spot_move, point.vol_move): point for point in result.grid}
+
+    def rows() -> Iterator[tuple[str, ...]]:
+        for spot in result.spot_moves:
+            found = [at[spot, vol] for vol in vols]
+            yield (move(spot), *("none" if point.refused else fixed(point.price * factor, places) for point in found))
+
+    page.table(("spot", *(f"{move(vol)} vol" for vol in vols)), rows(), words=0)
+    errors = [point.standard_error for point in result.grid if not point.refused]
+    if errors:
+        page.line(f"  standard errors of at most {fixed(max(errors) * factor, places)}")
+    page.items(dict.fromkeys(f"vol {move(point.vol_move)}, spot {move(point.spot_move)}: {point.refused}"
+                             for point in result.grid if point.refused))
+
+
+def move(share: float) -> str:
+    """A move as '+2.5 %'."""
+    return f"{100.0 * share:+.4g} %" if share else "0 %"

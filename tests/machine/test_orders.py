@@ -1,0 +1,111 @@
+"""Path orders: orthogonal, the same in the kernel as in numpy, and the first coordinates decide what they should."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+
+import numpy as np
+import pytest
+from made_programs import SEED, program
+
+from mcx.machine.draw_plan import LEADING, DrawPlan, PathOrder
+from mcx.machine.orders import COMPONENT_STEPS, bridge, components
+from mcx.machine.run import draws
+
+RNG = np.random.default_rng(SEED)
+CLOCKS = {
+    "one step": np.array([[0.04]]),
+    "two steps": np.array([[0.04], [0.01]]),
+    "even": np.full((12, 1), 0.04 / 12),
+    "uneven, three assets": RNG.exponential(size=(7, 3)),
+    "a still step": np.array([[0.01, 0.0], [0.0, 0.0], [0.02, 0.0], [0.01, 0.0], [0.03, 0.0]]),
+    "many": RNG.exponential(size=(67, 2)),
+}
+
+
+def matrix(order: PathOrder, normals: int) -> np.ndarray:
+    """The order as the matrix that takes the coordinates' normals to the tape's, by what its fields say."""
+    z = np.eye(normals)[order.coordinates]
+    for asset, (left, right) in enumerate(zip(order.left, order.right)):
+        own = slice(asset, None, len(order.left))
+        z[own] = z[own] - left @ (right.T @ z[own])
+    for (i, j), (c, s) in zip(order.pairs, order.turns, strict=True):
+        z[[i, j]] = np.array([[c, s], [s, -c]]) @ z[[i, j]]
+    return z
+
+
+@pytest.mark.parametrize("order", [bridge, components])
+@pytest.mark.parametrize("name", CLOCKS)
+def test_an_order_is_orthogonal(name: str, order: Callable):
+    """Independent standard normals stay so, whatever the clock, also where an asset stands still."""
+    clock = CLOCKS[name]
+    found = matrix(order(clock), clock.size)
+    np.testing.assert_allclose(found @ found.T, np.eye(clock.size), atol=1e-14)
+
+
+@pytest.mark.parametrize("order", [bridge, components])
+@pytest.mark.parametrize("name", CLOCKS)
+def test_the_kernel_mixes_as_the_matrix_says(name: str, order: Callable):
+    """Normals in an order are the matrix times those of the same points without one, in every lane of several groups."""
+    clock = CLOCKS[name]
+    made = program([], rows=clock.size + 1, outputs=[0], normals=clock.size, uniforms=1)
+    plain = draws(made, seed=SEED, numbers=range(150), plan=DrawPlan(1))
+    mixed = draws(made, seed=SEED, numbers=range(150), plan=DrawPlan(1, order(clock)))
+    expected = plain[:, :-1] @ matrix(order(clock), clock.size).T
+    np.testing.assert_allclose(mixed[:, :-1], expected, rtol=0.0, atol=1e-13)
+    np.testing.assert_array_equal(mixed[:, -1], plain[:, -1])
+
+
+def test_random_numbers_can_have_an_order():
+    """They are all alike, so that each normal keeps its number before the mixing."""
+    clock = CLOCKS["even"]
+    made = program([], rows=12, outputs=[0], normals=12)
+    order = bridge(clock)
+    plain, mixed = (draws(made, seed=SEED, numbers=range(70), plan=DrawPlan(0, each)) for each in (None, order))
+    np.testing.assert_allclose(mixed, plain @ matrix(order, 12)[:, order.coordinates].T, rtol=0.0, atol=1e-13)
+
+
+@pytest.mark.parametrize("name", ["even", "uneven, three assets", "many"])
+def test_the_bridge_decides_the_end_first(name: str):
+    """The first coordinates are the ends of the assets' paths; then each the middle of the widest open stretch: what is
+    still open after each coordinate falls as fast as halving allows."""
+    clock = CLOCKS[name]
+    steps, assets = clock.shape
+    found = matrix(bridge(clock), clock.size)
+    for asset in range(assets):
+        path = np.cumsum(np.sqrt(clock[:, [asset]]) * found[asset::assets, asset::assets], axis=0)
+        np.testing.assert_allclose(path[-1], [np.sqrt(clock[:, asset].sum()), *np.zeros(steps - 1)], atol=1e-12)
+        reached = [np.flatnonzero(np.abs(path[:, k]) > 1e-12) for k in range(1, steps)]
+        spread = [np.max(np.abs(path[:, k])) for k in range(1, steps)]
+        assert np.all(np.diff(spread) < 1e-12)
+        assert all(np.array_equal(rows, np.arange(rows[0], rows[-1] + 1)) for rows in reached)
+
+
+@pytest.mark.parametrize("name", ["two steps", "even", "uneven, three assets", "many"])
+def test_components_are_the_principal_ones(name: str):
+    """The first coordinates move the path along the leading eigenvectors of its covariance, as far as these say."""
+    clock = CLOCKS[name]
+    steps, assets = clock.shape
+    found = matrix(components(clock), clock.size)
+    for asset in range(assets):
+        times = np.cumsum(clock[:, asset])
+        values, vectors = np.linalg.eigh(np.minimum.outer(times, times))
+        path = np.cumsum(np.sqrt(clock[:, [asset]]) * found[asset::assets, asset::assets], axis=0)
+        for k in range(min(LEADING, steps)):
+            expected = np.sqrt(values[-1 - k]) * vectors[:, -1 - k]
+            sign = np.sign(path[-1, k] * expected[-1])
+            np.testing.assert_allclose(path[:, k], sign * expected, atol=1e-8 * np.sqrt(times[-1]))
+
+
+def test_four_components_are_most_of_a_path():
+    """On even dates the leading components carry 95 % of a path's variance, as the module says."""
+    times = np.arange(1.0, 53.0)
+    values = np.linalg.eigvalsh(np.minimum.outer(times, times))
+    assert values[-LEADING:].sum() > 0.949 * values.sum()
+
+
+def test_very_long_paths_take_the_bridge():
+    """Beyond the limit both orders are the same."""
+    clock = np.full((COMPONENT_STEPS + 1, 1), 1e-4)
+    assert not components(clock).left.size
+    np.testing.assert_array_equal(components(clock).coordinates, bridge(clock).coordinates)
