@@ -6,6 +6,7 @@ are named values: the price, each leg, each condition. `Program` is a tape made 
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass, field, replace
 from enum import Enum
 
@@ -149,6 +150,13 @@ class Tape:
 
 
 ALONE = np.iinfo(np.int32).max
+
+
+def spot_leaf(leaves: Iterable[Leaf], asset: int) -> Leaf:
+    """The LOG_SPOT leaf of an asset among a tape's, whatever cash dividends it leaves out; the plain one where there is
+    none."""
+    return next((leaf for leaf in leaves if leaf.kind is LeafKind.LOG_SPOT and leaf.asset == asset),
+                Leaf(LeafKind.LOG_SPOT, asset=asset))
 
 
 @dataclass(frozen=True, slots=True)
