@@ -14,7 +14,7 @@ from concurrent.futures import ThreadPoolExecutor
 
 import numpy as np
 
-from mcx.machine.draw_plan import LEADING, PLAIN, DrawPlan
+from mcx.machine.draw_plan import PLAIN, DrawPlan
 from mcx.machine.draws import drawing_of, fill_draws
 from mcx.machine.forward import forward
 from mcx.machine.jit import jit
@@ -27,14 +27,13 @@ _CACHE_LINE = 8  # float64
 
 
 @jit
-def sweep(code, scalars, outputs, drawing, numbers, paths, registers, words, runs, room,
+def sweep(code, scalars, outputs, drawing, numbers, paths, registers, words, runs,
           means, squares, bad, sums, values):  # fmt: skip
     """Run whole blocks of paths and sum each output, and what the code sums, over each group of 64.
 
     numbers    (blocks * lanes,) uint64: path numbers, of which the first `paths` count
     drawing    see `Drawing`
-    registers  (rows + 1, more than lanes) float64, words (4, lanes) int32, runs (lanes / 64,) int64 and
-               room (LEADING, 64) float64: to work in
+    registers  (rows + 1, more than lanes) float64, words (4, lanes) int32 and runs (lanes / 64,) int64: to work in
     means      (groups, outputs), written: the mean over each group
     squares    (groups, outputs), written: the sum of squares about that mean
     bad        (groups,) int64, written: path * outputs + output of the first value that is not finite, with
@@ -45,7 +44,7 @@ def sweep(code, scalars, outputs, drawing, numbers, paths, registers, words, run
     lanes, width = words.shape[1], outputs.shape[0]
     tree = registers[registers.shape[0] - 1]
     for first in range(0, paths, lanes):
-        fill_draws(registers, words, runs, room, numbers[first : first + lanes], drawing)
+        fill_draws(registers, words, runs, numbers[first : first + lanes], drawing)
         here = min(lanes, paths - first)
         forward(registers, code, scalars, lanes, here, sums[first // GROUP : (first + lanes) // GROUP])
         for start in range(0, here, GROUP):
@@ -160,5 +159,4 @@ class Crew:
         raw = np.empty((self.code.rows + 1) * stride + _CACHE_LINE)
         start = -raw.ctypes.data // 8 % _CACHE_LINE
         registers = raw[start : start + (self.code.rows + 1) * stride].reshape(-1, stride)
-        words, runs = np.empty((4, self.lanes), dtype=np.int32), np.empty(self.lanes // GROUP, dtype=np.int64)
-        return registers, words, runs, np.empty((LEADING, GROUP))
+        return registers, np.empty((4, self.lanes), dtype=np.int32), np.empty(self.lanes // GROUP, dtype=np.int64)

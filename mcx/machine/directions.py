@@ -22,8 +22,9 @@ def most_coordinates() -> int:
     return len(_table()[0])
 
 
+@cache
 def directions(coordinates: int) -> np.ndarray:
-    """What bit k of a point's number contributes to each coordinate, shape (coordinates, 32) uint32.
+    """What bit k of a point's number contributes to each coordinate, shape (coordinates, 32) uint32, not to be written.
 
     Digits are in reverse: the first binary digit of a coordinate is bit 0. The recurrence: I. Sobol' (1967), in the
     form of P. Bratley and B. Fox, "Algorithm 659", ACM Trans. Mathematical Software 14 (1988), 88-100.
@@ -43,7 +44,9 @@ def directions(coordinates: int) -> np.ndarray:
                 coefficient = (polynomials[rows] >> (degree - j) & 1).astype(np.uint64)
                 number ^= coefficient * found[rows, k - j] << np.uint64(j)
             found[rows, k] = number
-    return _reversed(found, np.arange(1, DIGITS + 1))
+    turned = _reversed(found, np.arange(1, DIGITS + 1))
+    turned.flags.writeable = False
+    return turned
 
 
 def _reversed(numbers: np.ndarray, digits: np.ndarray) -> np.ndarray:

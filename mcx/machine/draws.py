@@ -77,14 +77,16 @@ def _keys(scrambles: int, coordinates: int, seed: int, stream: int) -> np.ndarra
 
 
 @jit
-def fill_draws(registers, words, runs, room, numbers, drawing):
+def fill_draws(registers, words, runs, numbers, drawing):
     """Rows 0 .. normals-1: standard normals; the next `uniforms` rows: uniforms in (0, 1), 2^-32 apart.
 
     registers  (rows, at least lanes) float64, written
-    words      (4, lanes) int32, runs (lanes / 64,) int64 and room (LEADING, 64) float64: to work in
+    words      (4, lanes) int32 and runs (lanes / 64,) int64: to work in
     numbers    (lanes,) uint64, path numbers
     """
-    lanes, net = words.shape[1], drawing.directions.shape[0] > 0
+    wide_vectors()
+    table, low, keys = drawing.directions, drawing.low, drawing.keys
+    lanes, net = words.shape[1], table.shape[0] > 0
     if net:
         find_runs(runs, numbers)
     for row in range(drawing.normals + drawing.uniforms):
@@ -92,7 +94,7 @@ def fill_draws(registers, words, runs, room, numbers, drawing):
         dimension = row if normal else row - drawing.normals
         word = words[dimension % 4]
         if net:
-            fill_net(word, numbers, runs, drawing.directions[row], drawing.low[row], drawing.keys[row])
+            fill_net(word, numbers, runs, table[row], low[row], keys[row])
         elif dimension % 4 == 0:
             block = np.uint64(dimension // 4 + (0 if normal else _UNIFORM_BLOCKS))
             fill_words(words, numbers, drawing.seed, block, drawing.stream)
@@ -100,7 +102,7 @@ def fill_draws(registers, words, runs, room, numbers, drawing):
             normal_row(registers[row], word, lanes)
         else:
             _uniform_row(registers[row], word, lanes)
-    mix(registers, room, drawing.left, drawing.right, drawing.pairs, drawing.turns, lanes)
+    mix(registers, drawing.left, drawing.right, drawing.pairs, drawing.turns, lanes)
 
 
 @jit

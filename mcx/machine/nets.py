@@ -17,6 +17,7 @@ import numpy as np
 from mcx.machine.bits import lowest_bit, reversed_bits
 from mcx.machine.draw_plan import SCRAMBLE_BITS
 from mcx.machine.jit import jit
+from mcx.machine.rows import wide_vectors
 from mcx.machine.sizes import GROUP
 
 _MIX = np.uint32(0x53A22864)
@@ -30,6 +31,7 @@ _ONE = np.uint64(1)
 @jit
 def find_runs(runs, numbers):
     """Which groups of 64 lanes hold 64 consecutive points, the first a multiple of 64: runs (groups,) int64, 0 or 1."""
+    wide_vectors()
     for group in range(runs.shape[0]):
         first = numbers[group * GROUP]
         strangers = first & _LOW
@@ -49,6 +51,7 @@ def fill_net(words, numbers, runs, directions, low, keys):
     low         (64,) uint32: what the lowest six bits together contribute
     keys        (scrambles, 2) uint32: what is added, and the odd number that multiplies
     """
+    wide_vectors()
     last, base = np.uint64(0), np.uint32(0)
     for group in range(runs.shape[0]):
         start = group * GROUP
