@@ -25,8 +25,8 @@ DAYS = 365  # a decrement in points is taken each calendar day
 class Payouts:
     """Dividends with ex dates after today, times in years, in order.
 
-    `share_logs[k]` is the log of what a share leaves at `share_times[k]`; `worth[k]` is today's value of the cash that is
-    paid at `cash_times[k]`, discounted at the asset's own growth.
+    `share_logs[k]` is the log of what a share leaves at `share_times[k]`; `worth[k]` is today's value of the cash that
+    is paid at `cash_times[k]`, discounted at the asset's own growth.
     """
 
     share_times: tuple[float, ...] = ()

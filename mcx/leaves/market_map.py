@@ -48,8 +48,8 @@ class MarketMap:
     """What a market says about the assets and the currency of one contract. Both are checked already.
 
     `last` is the last time at which the contract reads a level, which forwards need where cash dividends are escrowed
-    (`MarketMap.of` finds it); leaves carry it themselves. Beside the assets, numbered in the contract's order, the rates
-    of exchange of composite assets are simulated; they have the numbers after them.
+    (`MarketMap.of` finds it); leaves carry it themselves. Beside the assets, numbered in the contract's order, the
+    rates of exchange of composite assets are simulated; they have the numbers after them.
     """
 
     @classmethod
