@@ -101,8 +101,8 @@ def test_a_jump_that_looks_at_dividends_to_come(tmp_path: Path):
 def test_a_jump_after_the_last_dividend_has_its_rho(tmp_path: Path, size: str):
     """On or after the ex date nothing is to come, and nothing is refused."""
     digital = f"payoff: digital\nterms: {{side: call, pays: cash, amount: 100, strike: 95, expiry: {size}}}\n"
-    found, result = greeks(tmp_path, HEAD + digital + market("currency: EUR, dividends: [{ex: 0.75y, cash: 8}], vol: 20%"),
-                           paths=2**19)
+    asset = "currency: EUR, dividends: [{ex: 0.75y, cash: 8}], vol: 20%"
+    found, result = greeks(tmp_path, HEAD + digital + market(asset), paths=2**19)
     assert result.refused == ()
     time = float(size[:-1])
     left, deviation = 100 - 8 * exp(-0.03), 0.2 * sqrt(time)
