@@ -21,6 +21,7 @@ from mcx.text.documents import read_documents
 from mcx.text.located import Document
 
 if TYPE_CHECKING:
+    from mcx.checked.market import Market
     from mcx.estimators.greeks import Wish
     from mcx.estimators.plan import Precision
     from mcx.estimators.price import Ready
@@ -140,6 +141,8 @@ def readback(*files: File, path: File | None = None) -> Readback | ReadbackTable
     made, dated = _dated(files, with_market=False)
     if path is not None and len(dated) > 1:
         raise RequestError(f"levels can be run through one contract at a time; the files hold {len(dated)}")
+    if made.market is not None:
+        _check_dividends(made.market, dated)
     given = None if path is None else _on_levels(dated[0], path)
     found = tuple(read_back(each, made.market, given) for each in dated)
     return found[0] if len(found) == 1 else ReadbackTable(found)
@@ -252,6 +255,15 @@ def _watches_refused(dated: Iterable[DatedContract]) -> list[Fault]:
     from mcx.tape.unroll import unroll
 
     return [fault for each in watched for fault in unroll(each, nodes=()).faults]
+
+
+def _check_dividends(market: Market, dated: Iterable[DatedContract]) -> None:
+    """Raises InputError where cash dividends are worth as much as the spot."""
+    from mcx.leaves.market_map import MarketMap
+
+    faults = [fault for each in dated for fault in MarketMap.of(market, each).faults()]
+    if faults:
+        raise InputError(faults)
 
 
 def _price(

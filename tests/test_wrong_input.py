@@ -122,8 +122,9 @@ SLIPS = {
         "23:11: the market has no rates for 'CHF'; it has 'EUR'",
         "39:10: no funding spread for 'CHF', the currency of the note 'Harbour, lantern and quarry averaging note'; "
         "write 'funding: {CHF: 0 bp}' to value it without the issuer's spread",
-        *(f"{line}:3: '{name}' is quoted in EUR, but 'Harbour, lantern and quarry averaging note' pays in CHF; paying "
-          "in another currency (quanto) is for a later version"
+        *(f"{line}:3: '{name}' is quoted in EUR, but 'Harbour, lantern and quarry averaging note' pays in CHF; write "
+          f"in the contract 'conversion: {{{name}: quanto}}' (paid at a fixed rate) or '{{{name}: composite}}' "
+          "(converted at the rate of the day)"
           for line, name in ((41, "harbour"), (42, "lantern"), (43, "quarry")))),
     "falling total variance": ("3y: 19%", "3y: 10%",
                                "41:74: total variance falls from 0.0324 at '1y' to 0.0300274 at '3y'; a vol of "

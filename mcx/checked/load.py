@@ -12,6 +12,7 @@ from itertools import combinations
 from pathlib import Path
 
 from mcx.checked.contract import Contract
+from mcx.checked.conversions import conversion_faults, conversions, read_conversion, simulated_rates
 from mcx.checked.curves import valuation_of
 from mcx.checked.library import Definitions, clashes, stands_for_shipped
 from mcx.checked.market import Market
@@ -152,9 +153,16 @@ def _with_origin(contract: Contract, definition: Document) -> Contract:
 
 def _with_assumptions(contract: Contract, market: Market) -> Contract:
     """The contract with what is assumed because the market does not say it."""
-    if contract.units is None or contract.currency in market.funding:
-        return contract
-    return replace(contract, assumptions=(*contract.assumptions, NO_FUNDING))
+    conversion, said = conversions(contract.conversion, contract.currency, contract.assets, market)
+    if contract.units is not None and contract.currency not in market.funding:
+        said = (*said, NO_FUNDING)
+    return replace(contract, conversion=conversion, assumptions=(*contract.assumptions, *said))
+
+
+def conversions_known(pair: Pair) -> list[Fault]:
+    """Every asset in another currency counts in a stated way, and the market has what that needs."""
+    return conversion_faults(pair.title, pair.currency, pair.assets, pair.market, pair.contract_body,
+                             bool(pair.stated("fx")) and not pair.market.fx)
 
 
 def _place(body: Mapping, key: str) -> Place:
@@ -195,20 +203,15 @@ def funding_stated(pair: Pair) -> list[Fault]:
 
 
 def assets_known(pair: Pair) -> list[Fault]:
-    """Every asset of the contract is in the market, in the contract's currency."""
+    """Every asset of the contract is in the market."""
     stated = pair.stated("assets")
     if not stated or not pair.assets:
         return []
     faults = []
     for name, node in zip(pair.assets, pair.contract_body.get("assets"), strict=True):
-        asset = pair.market.assets.get(name)
         if name not in stated:
             near = did_you_mean(name, stated) or f"; it has {listed(stated)}"
             faults.append(Fault(node.place, f"the market has no asset '{name}'{near}"))
-        elif asset and asset.currency and pair.currency and asset.currency != pair.currency:
-            text = (f"'{name}' is quoted in {asset.currency}, but '{pair.title}' pays in "
-                    f"{pair.currency}; paying in another currency (quanto) is for a later version")
-            faults.append(Fault(asset.place, text))
     return faults
 
 
@@ -217,10 +220,13 @@ def correlations_known(pair: Pair) -> list[Fault]:
     matrix."""
     pairs = pair.stated("correlation")
     known = [name for name in pair.assets if name in (pair.stated("assets") or ())]
+    known += simulated_rates(read_conversion(pair.contract_body.get("conversion"), pair.assets, []), pair.currency,
+                             pair.market)
     if pairs is None or len(known) < 2:
         return []
     stated = [tuple(part.strip() for part in each.split("/")) for each in pairs]
-    if any(len(names) != 2 or not set(names) <= set(pair.stated("assets")) for names in stated):
+    named = {*pair.stated("assets"), *(pair.stated("fx") or ())}
+    if any(len(names) != 2 or not set(names) <= named for names in stated):
         return []  # a pair that was misspelt is not missing as well
     place = _place(pair.market_body, "correlation" if "correlation" in pair.market_body else "market")
     missing = [f"{a}/{b}" for a, b in combinations(known, 2) if (a, b) not in stated and (b, a) not in stated]
@@ -243,5 +249,5 @@ def correlations_known(pair: Pair) -> list[Fault]:
 
 
 CROSS_CHECKS: tuple[Callable[[Pair], list[Fault]], ...] = (
-    one_kind_of_time, rates_known, funding_stated, assets_known, correlations_known,
+    one_kind_of_time, rates_known, funding_stated, assets_known, conversions_known, correlations_known,
 )

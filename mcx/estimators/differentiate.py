@@ -30,7 +30,7 @@ from mcx.machine.sizes import cost
 from mcx.tape.adjoint import Gradient, finished, leaf_sums, of_the_market, on_paths, sums_of, sweep
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
-from mcx.tape.program import Leaf, LeafKind, Program, Sum, Tape
+from mcx.tape.program import Leaf, LeafKind, Program, Sum, Tape, spot_leaf
 from mcx.tape.registers import lower, uniform_values
 from mcx.tape.scores import BRIDGES, Scores, latest_steps, scores
 from mcx.tape.steps import Grid
@@ -123,7 +123,7 @@ class Differentiator:
                     derived.append(Sum(later[score.step], score.value, leaf))
                     controls.append(Sum(score.value, running[score.step], leaf))
             for edge in law.edges if 1 in later else ():
-                leaf = builder.leaf(Leaf(LeafKind.LOG_SPOT, asset=edge.asset))
+                leaf = builder.leaf(spot_leaf(tape.leaves, edge.asset))
                 derived.append(Sum(replaced(builder, later[1], edge.extreme, edge.start), edge.weight, leaf))
                 controls.append(Sum(edge.weight, None, leaf))
         deltas, curved, extra = [], [], []
@@ -238,7 +238,7 @@ def replaced(builder: Builder, value: int, old: int, new: int) -> int:
 def _by_log_spots(builder: Builder, tape: Tape, gradient: Gradient, assets: Iterable[int]) -> dict[int, int]:
     """By asset the derivative by its log spot as a value on each path: paths read it alone, or with the first drift
     added."""
-    spots = {asset: builder.leaf(Leaf(LeafKind.LOG_SPOT, asset=asset)) for asset in assets}
+    spots = {asset: builder.leaf(spot_leaf(tape.leaves, asset)) for asset in assets}
     read = {spot: [spot] for spot in spots.values()}
     for number, step in enumerate(tape.instructions):
         if step.op is Op.ADD:
@@ -304,7 +304,7 @@ def without_first_levels(tape: Tape) -> Tape:
         if step.op is Op.EXP:
             return starts(step.operands[0], asset, joined)
         bridge = Op.BRIDGE_LOW if joined is Op.MIN else Op.BRIDGE_HIGH
-        return step.op is bridge and leaves.get(step.operands[0]) == Leaf(LeafKind.LOG_SPOT, asset=asset)
+        return step.op is bridge and leaves.get(step.operands[0]) == spot_leaf(tape.leaves, asset)
 
     for step in tape.instructions:
         values.append(builder.copy(step, tuple(values[k] for k in step.operands)))

@@ -20,6 +20,7 @@ from mcx.tape.smooth import Jump, jumps, payments
 PATHWISE, LIKELIHOOD, MIXED = "pathwise", "likelihood ratio", "mixed"
 GAMMAS = {PATHWISE: "likelihood ratio of the pathwise delta", LIKELIHOOD: "second-order likelihood ratio",
           MIXED: "mixed: likelihood ratio of the pathwise delta, second-order where payments jump"}
+ESCROWS = (LeafKind.ESCROW, LeafKind.MEAN_ESCROW)
 COMPARED = (Op.LT, Op.LE, Op.EQ, Op.NE)
 SINGULAR = 1e-14  # an own variance below this share of the whole
 MOST_DRAWS = 64  # where every payment is smooth; the variance of a likelihood ratio grows with the steps
@@ -75,6 +76,9 @@ def methods(ready: Ready, market: Market, asked: str) -> Methods:
         refusals = {}
         if likelihood and (reason := read_today(tape, known)):
             refusals["spot"] = reason
+        if likelihood and (reason := dividends_compared(tape, known)):
+            blended = any(market.assets[name].blend for name in contract.assets)
+            refusals |= {kind: reason for kind in ("rate", "yield", *(("spot",) if blended else ()))}
         if reason := still or second_order_trouble(tape, engine):
             refusals["gamma"] = reason
         return Method(name, engine, refusals)
@@ -121,6 +125,20 @@ def read_today(tape: Tape, known: Sequence[float | None]) -> str:
             today.add(number)
         if step.op in COMPARED and any(k in today for k in step.operands) and known[number] is None:
             return f"today's level is compared with a later one at {step.place}, so a move of the spot moves both"
+    return ""
+
+
+def dividends_compared(tape: Tape, known: Sequence[float | None]) -> str:
+    """Why a likelihood ratio by a rate would miss something: cash dividends still to come are part of a level that is
+    compared, and their value moves while the draws are held; '' where they are not."""
+    moved: set[int] = set()
+    for number, step in enumerate(tape.instructions):
+        escrow = step.op is Op.LEAF and step.payload.kind in ESCROWS and known[number] != 0.0
+        if escrow or any(k in moved for k in step.operands):
+            moved.add(number)
+        if step.op in COMPARED and any(k in moved for k in step.operands) and known[number] is None:
+            return (f"cash dividends still to come are part of a level that is compared at {step.place}, and a move of "
+                    f"rates moves their value")
     return ""
 
 

@@ -62,8 +62,10 @@ class Valuation:
 
 def prepare(dated: DatedContract, market: Market) -> tuple[Ready | None, tuple[Fault, ...]]:
     """The program of a contract on a market, and what the tape refuses."""
-    market_map = MarketMap(market, dated.contract)
-    unrolled = unroll(dated, nodes=market_map.nodes())
+    market_map = MarketMap.of(market, dated)
+    if faults := market_map.faults():
+        return None, tuple(faults)
+    unrolled = unroll(dated, nodes=market_map.nodes(), makeup=market_map.makeup())
     if unrolled.faults:
         return None, unrolled.faults
     program = lower(unrolled.tape, market_map.values(unrolled.tape.leaves))

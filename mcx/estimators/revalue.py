@@ -52,7 +52,8 @@ class Revaluer:
 def seen_from(leaves: Iterable[Leaf], later: float) -> list[Leaf]:
     """The leaves with every time that much nearer: what lies between is now, at today's level."""
     return [leaf if leaf.kind is LeafKind.TERM else
-            replace(leaf, start=max(leaf.start - later, 0.0), end=max(leaf.end - later, 0.0)) for leaf in leaves]
+            replace(leaf, start=max(leaf.start - later, 0.0), end=max(leaf.end - later, 0.0),
+                    last=max(leaf.last - later, 0.0)) for leaf in leaves]
 
 
 def step_of(number: Input, size: float) -> float:

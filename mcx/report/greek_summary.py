@@ -53,7 +53,7 @@ def greeks_result(ready: Ready, market: Market, wish: Wish, found: Found) -> Gre
         ladder=tuple(_rung(step, assets, contract.size) for step in found.ladder),
         grid=tuple(_point(point, contract.size) for point in found.grid),
         warnings=tuple(_warnings(found)),
-        assumptions=tuple(dict.fromkeys((*assumptions(dated, market), *CONVENTIONS))),
+        assumptions=tuple(dict.fromkeys((*assumptions(dated, market, ready.market), *CONVENTIONS))),
         limits=tuple(limits(dated)),
         cautions=tuple(cautions(dated, named=False)),
         calendar_version=dated.calendar_version,

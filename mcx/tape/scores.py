@@ -16,7 +16,7 @@ from dataclasses import dataclass
 
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
-from mcx.tape.program import Leaf, LeafKind, Tape
+from mcx.tape.program import Leaf, LeafKind, Tape, spot_leaf
 from mcx.tape.steps import Grid
 
 BRIDGES = (Op.BRIDGE_LOW, Op.BRIDGE_HIGH)
@@ -109,7 +109,7 @@ class _Scores:
         for (one, other), inverse in self.precision.items():
             total = emit(Op.SUB, emit(Op.MUL, self.spots[one], self.spots[other]), inverse)
             second[one, other] = emit(Op.ADD, total, self.bends[one]) if one == other and one in self.bends else total
-        spots = [Score(Leaf(LeafKind.LOG_SPOT, asset=asset), value, 1) for asset, value in self.spots.items()]
+        spots = [Score(spot_leaf(self.tape.leaves, asset), value, 1) for asset, value in self.spots.items()]
         return Scores((*self.first, *spots), self.spots, second, tuple(self.edges))
 
     def step_of(self, bridge: int) -> int:

@@ -136,8 +136,9 @@ SLIPS = [
      ["a.yaml:2:11: the market has no rates for 'USD'; it has 'EUR'",
       "b.yaml:3:10: no funding spread for 'USD', the currency of the note 'Worst-of put'; write 'funding: "
       "{USD: 0 bp}' to value it without the issuer's spread",
-      *(f"b.yaml:{line}:3: '{name}' is quoted in EUR, but 'Worst-of put' pays in USD; paying in another "
-        "currency (quanto) is for a later version"
+      *(f"b.yaml:{line}:3: '{name}' is quoted in EUR, but 'Worst-of put' pays in USD; write in the contract "
+        f"'conversion: {{{name}: quanto}}' (paid at a fixed rate) or '{{{name}: composite}}' (converted at the rate of "
+        "the day)"
         for line, name in ((5, "harbour"), (6, "quarry"), (7, "orchard")))]),
     (CONTRACT, "[harbour,", "[harbor,",
      ["a.yaml:4:10: the market has no asset 'harbor'; did you mean 'harbour'?"]),
@@ -195,10 +196,38 @@ def test_what_is_wrong_in_a_document_is_not_missing_beside_it():
 
 
 def test_currency_of_the_asset():
-    """An asset in another currency than the contract's is refused by name until quanto comes."""
+    """An asset in another currency than the contract's needs its conversion, and each conversion its market: rates of
+    that currency, then the rate of exchange's vol and correlation, or the rate itself with all its correlations."""
     market = MARKET.replace("quarry: {spot: 100, currency: EUR", "quarry: {spot: 100, currency: USD")
-    assert made(CONTRACT, market)[1] == ["b.yaml:6:3: 'quarry' is quoted in USD, but 'Worst-of put' pays in "
-                                         "EUR; paying in another currency (quanto) is for a later version"]
+    assert made(CONTRACT, market)[1] == [
+        "b.yaml:6:3: 'quarry' is quoted in USD, but 'Worst-of put' pays in EUR; write in the contract 'conversion: "
+        "{quarry: quanto}' (paid at a fixed rate) or '{quarry: composite}' (converted at the rate of the day)"]
+    quanto = CONTRACT.replace("currency: EUR", "currency: EUR\nconversion: {quarry: quanto}")
+    assert made(quanto, market)[1] == ["b.yaml:6:3: the market has no rates for 'USD', the currency of 'quarry'"]
+    market = market.replace("rates: {", "rates: {USD: 4%, ")
+    assert made(quanto, market)[1] == ["b.yaml:6:3: 'quarry' is paid in EUR at a fixed rate; its market needs 'quanto: "
+                                       "{fx_vol: ..., fx_correlation: ..., fx: EUR per USD}'"]
+    composite = quanto.replace("quanto", "composite")
+    assert made(composite, market)[1] == ["b.yaml:6:3: 'quarry' is converted from USD to EUR, but the market has no "
+                                          "rate of exchange; write 'fx: {EUR per USD: {spot: ..., vol: ...}}'"]
+    market = market.replace("correlation:", "fx: {USD per EUR: {spot: 1.1, vol: 8%}}\ncorrelation:")
+    assert made(composite, market)[1] == ["b.yaml:9:14: no correlation for 'harbour/USD per EUR', 'quarry/USD per EUR' "
+                                          "and 'orchard/USD per EUR'"]
+    assert made(CONTRACT.replace("currency: EUR", "currency: EUR\nconversion: {harbour: quanto}"), MARKET)[1] == [
+        "a.yaml:3:14: 'harbour' is quoted in EUR, the contract's currency: there is nothing to convert"]
+
+
+def test_a_quanto_that_only_the_market_suggests():
+    """The market's 'quanto' is enough, but then the result says that it was."""
+    market = MARKET.replace("rates: {", "rates: {USD: 4%, ").replace(
+        "quarry: {spot: 100, currency: EUR",
+        "quarry: {spot: 100, quanto: {fx_vol: 9%, fx_correlation: -20%, fx: EUR per USD}, currency: USD")
+    asked, faults = made(CONTRACT, market)
+    assert faults == []
+    assert asked.contracts[0].conversion == {"quarry": "quanto"}
+    assert any("taken to be paid in EUR at a fixed rate" in said for said in asked.contracts[0].assumptions)
+    assert made(CONTRACT, market.replace("EUR per USD", "GBP per USD"))[1] == [
+        "b.yaml:6:31: the quanto of 'quarry' is about GBP per USD; expected 'EUR per USD' or 'USD per EUR'"]
 
 
 def test_correlations_that_cannot_be():
