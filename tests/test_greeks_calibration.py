@@ -62,7 +62,7 @@ CASES = {"pathwise": (CALL, call), "likelihood": (TEXT, both), "mixed": (TEXT, b
 def runs(estimator: str) -> tuple[np.ndarray, np.ndarray]:
     """Delta, vega, rho and gamma by an estimator: values and errors of all runs, (runs, 4), fewest paths each."""
     made, market = ready(CASES[estimator][0])
-    bound = methods(made, market, estimator).valid[0].engine.on(market)
+    bound = methods(made, market, estimator).valid[0].on(market)
     kinds = [number.kind for number in inputs(market, made.dated.contract)]
     columns = [kinds.index(kind) for kind in ("spot", "vol", "rate")]
     coefficients = bound.derivatives(Sampling(SEEDS[0], PILOT, Stream.PILOT, threads=1)).fitted()

@@ -41,8 +41,8 @@ def contracts() -> list:
 
 @pytest.mark.parametrize(("example", "number"), contracts())
 def test_estimators_agree_with_revaluation(example: Path, number: int):
-    """Within four errors, and what the revaluation's bias may be: how far two sizes of its moves are apart. The nodes of
-    a curve of rates are left to their sum: they shift a drift so little that no path may cross a jump."""
+    """Within four errors, and what the revaluation's bias may be: how far two sizes of its moves are apart. The nodes
+    of a curve of rates are left to their sum: they shift a drift so little that no path may cross a jump."""
     request = request_of(example)
     dated, _ = date_contract(request.contracts[number], request.market.valuation)
     made, _ = prepare(dated, request.market)

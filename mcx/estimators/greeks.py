@@ -1,8 +1,8 @@
 """How a contract's value moves: every sensitivity with its error and the estimator that gave it.
 
-Which estimators are valid is decided by the tape. Among the valid ones a pilot on its own stream chooses, for each asset's
-delta, each vol curve and so on, the one with the smallest variance times cost; costs come from a fixed table, so that
-one seed has one answer.
+Which estimators are valid is decided by the tape. Among the valid ones a pilot on its own stream chooses, for each
+asset's delta, each vol curve and so on, the one with the smallest variance times cost; costs come from a fixed table,
+so that one seed has one answer.
 """
 
 from __future__ import annotations
@@ -16,7 +16,8 @@ import numpy as np
 
 from mcx.checked.market import Market
 from mcx.estimators.batches import FEWEST_PATHS, Batches, Sampling
-from mcx.estimators.differentiate import Bound, Coefficients, pairs_of
+from mcx.estimators.derivative_tape import pairs_of
+from mcx.estimators.differentiate import Coefficients, Differentiator
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.ladder import Point, Step, grid, ladder
 from mcx.estimators.methods import PATHWISE, Method, methods
@@ -105,7 +106,7 @@ class _Run:
         self.curvatures = [line for line in second_order(self.numbers, self.contract) if self._wanted(line.subject)]
         self.methods = methods(ready, market, wish.estimator)
         self.pilot = Sampling(seed, PILOT_PATHS, Stream.PILOT, threads, notice=notice)
-        self.bound: dict[str, Bound] = {}
+        self.bound: dict[str, Differentiator] = {}
         self.plan = self._plan(asked)
         counted = progress and (lambda done, _, error: progress(done, self.plan.paths, error))
         self.sampling = Sampling(seed, self.plan.paths, Stream.MAIN, threads, counted, notice)
@@ -152,10 +153,10 @@ class _Run:
         found = plan(asked, prices, seconds_for, exact=program.outputs[0] < 0)
         return replace(found, paths=max(found.paths, FEWEST_PATHS))
 
-    def _bound(self, method: Method) -> Bound:
+    def _bound(self, method: Method) -> Differentiator:
         """A method's tape on the market as it stands."""
         if method.name not in self.bound:
-            self.bound[method.name] = method.engine.on(self.market)
+            self.bound[method.name] = method.on(self.market)
         return self.bound[method.name]
 
     def _pilot(self, method: Method) -> tuple[Coefficients, Batches, Batches]:
@@ -275,7 +276,7 @@ class _Run:
         def deltas(market: Market) -> Batches | None:
             if method is None:
                 return None
-            found = method.engine.on(market).derivatives(self.sampling).with_controls(self._pilot(method)[0])[0]
+            found = method.on(market).derivatives(self.sampling).with_controls(self._pilot(method)[0])[0]
             return Batches(found.paths, found.means[:, spots])
 
         return ladder(self.revaluer, self.market, self._moving(), self.wish.spot_moves, self.sampling, base, deltas)

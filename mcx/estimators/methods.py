@@ -7,7 +7,8 @@ from dataclasses import dataclass, replace
 
 from mcx.checked.contract import Contract
 from mcx.checked.market import Market
-from mcx.estimators.differentiate import Differentiator, without_first_levels
+from mcx.estimators.derivative_tape import DerivativeTape, derivative_tape, without_first_levels
+from mcx.estimators.differentiate import Differentiator
 from mcx.estimators.price import Ready
 from mcx.faults import Refusal
 from mcx.leaves.market_map import MarketMap
@@ -30,8 +31,12 @@ class Method:
     """A valid estimator. `refusals`: kinds of numbers, and 'gamma', for which it is not, with the reason."""
 
     name: str
-    engine: Differentiator
+    made: DerivativeTape
+    contract: Contract
     refusals: dict[str, str]
+
+    def on(self, market: Market) -> Differentiator:
+        return Differentiator.on(self.made, market, self.contract)
 
     @property
     def gamma(self) -> str:
@@ -70,14 +75,14 @@ def methods(ready: Ready, market: Market, asked: str) -> Methods:
     still = without_own_randomness(dict(zip(tape.leaves, values, strict=True)), contract)
 
     def method(name: str, pathwise: list[int], likelihood: list[int]) -> Method:
-        engine = Differentiator.of(tape, unrolled.grid, contract, known, pathwise=pathwise, likelihood=likelihood,
-                                   second=not still)
+        made = derivative_tape(tape, unrolled.grid, len(contract.assets), known, pathwise=pathwise,
+                               likelihood=likelihood, second=not still)
         refusals = {}
         if likelihood and (reason := read_today(tape, known)):
             refusals["spot"] = reason
-        if reason := still or second_order_trouble(tape, engine):
+        if reason := still or second_order_trouble(tape, made):
             refusals["gamma"] = reason
-        return Method(name, engine, refusals)
+        return Method(name, made, contract, refusals)
 
     reason = f"the payoff jumps, and {still}" if still else ""
     if asked == "pathwise" and jumping:
@@ -113,8 +118,8 @@ def without_own_randomness(values: dict[Leaf, float], contract: Contract) -> str
 
 
 def read_today(tape: Tape, known: Sequence[float | None]) -> str:
-    """Why a likelihood ratio by a spot would miss something: today's level is compared with one that is drawn, and moves
-    while that is held; '' where it is not."""
+    """Why a likelihood ratio by a spot would miss something: today's level is compared with one that is drawn, and
+    moves while that is held; '' where it is not."""
     today: set[int] = set()
     for number, step in enumerate(tape.instructions):
         if _is_today(step) or any(k in today for k in step.operands):
@@ -124,11 +129,11 @@ def read_today(tape: Tape, known: Sequence[float | None]) -> str:
     return ""
 
 
-def second_order_trouble(tape: Tape, engine: Differentiator) -> str:
+def second_order_trouble(tape: Tape, made: DerivativeTape) -> str:
     """Why there is no gamma; '' where there is one."""
     if any(map(_is_today, tape.instructions)):
         return "the payoff reads today's level itself beside later ones; a second derivative through both is not taken"
-    if engine.rough:
+    if made.rough:
         return ("a payment that jumps reads a continuously watched extreme itself: its second-order score has no finite "
                 "variance")
     return ""

@@ -1,9 +1,9 @@
 """The numbers of a market document that a contract hangs on, markets with some of them moved, and the derivative of
 every leaf by each of them.
 
-A number is moved in the coordinate that its sensitivity is quoted in: spots, vols, zero rates, spreads, yields, forwards
-and correlations by a sum, a discount factor by a sum on its zero rate. A spot takes the forwards of its asset along, in
-proportion: what moves is the level, not the growth.
+A number is moved in the coordinate that its sensitivity is quoted in: spots, vols, zero rates, spreads, yields,
+forwards and correlations by a sum, a discount factor by a sum on its zero rate. A spot takes the forwards of its asset
+along, in proportion: what moves is the level, not the growth.
 """
 
 from __future__ import annotations

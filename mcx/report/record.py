@@ -1,4 +1,5 @@
-"""Valuation records: everything that a price, or its sensitivities, depend on, so that it can be found again, to the last bit.
+"""Valuation records: everything that a price, or its sensitivities, depend on, so that it can be found again, to the
+last bit.
 
 A record is one JSON document: the text of every file and definition with its SHA-256, the request, the versions of all
 that computes, the type of the processor, and the results. Its own SHA-256 stands in it, so that a record which was cut

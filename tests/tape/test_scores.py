@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from helpers import document, prepare
-from mcx.estimators.differentiate import without_first_levels
+from mcx.estimators.derivative_tape import without_first_levels
 from mcx.leaves.market_map import MarketMap
 from mcx.tape.builder import Builder
 from mcx.tape.interpret import interpret
