@@ -120,7 +120,8 @@ def greeks(
         for name in wish.assets:
             if name not in each.assets:
                 raise RequestError(f"'{each.title}' has no asset '{name}'{did_you_mean(name, each.assets)}")
-    table = _greeks(made, dated, [wish] * len(dated), [asked] * len(dated), [seed] * len(dated), threads, progress, notice)
+    count = len(dated)
+    table = _greeks(made, dated, [wish] * count, [asked] * count, [seed] * count, threads, progress, notice)
     if record is not None:
         from mcx.report.record import make_record, write_record
 
@@ -206,7 +207,8 @@ def replay(
     if stored.get("verb", "price") == "greeks":
         from mcx.estimators.wishes import wish_of
 
-        wishes = [wish_of(*(each[key] for key in ("estimator", "bump", "assets", "spot_moves", "vol_moves"))) for each in runs]
+        keys = ("estimator", "bump", "assets", "spot_moves", "vol_moves")
+        wishes = [wish_of(*(each[key] for key in keys)) for each in runs]
         results = _greeks(made, dated, wishes, asked, seeds, threads, progress, notice).contracts
     else:
         table = _price(made, dated, asked, seeds, threads, progress, notice)
@@ -320,8 +322,8 @@ def _finite(ready: Ready) -> Iterator[None]:
         raise Refusal(f"'{ready.dated.contract.title}': '{output}' is not a finite number on path {trouble.path} (seed "
                       f"{trouble.seed}, stream {trouble.stream}); {why}") from None
     except NonFiniteSum as trouble:
-        raise Refusal(f"'{ready.dated.contract.title}': a derivative is not a finite number on one of the 64 paths from "
-                      f"{trouble.first_path} on (seed {trouble.seed}, stream {trouble.stream}); {why}") from None
+        raise Refusal(f"'{ready.dated.contract.title}': a derivative is not a finite number on one of the 64 paths "
+                      f"from {trouble.first_path} on (seed {trouble.seed}, stream {trouble.stream}); {why}") from None
 
 
 def _ready(made: Request, dated: Sequence[DatedContract]) -> list[Ready]:

@@ -52,7 +52,8 @@ def autocall(spot: float, vol: float, rate: float, dividend_yield: float, fundin
         step = TIMES[0] - (gone if number == 0 else 0.0)
         levels = sorted({CALL[number], COUPON_BARRIER, *([KNOCK_IN, 1.0] if number == len(TIMES) - 1 else [])})
         ends = [-reach, *(log(level) for level in levels), reach]
-        cuts = [x for a, b in zip(ends, ends[1:], strict=False) for x in np.linspace(a, b, 2 + int((b - a) / (2.0 * vol)))[:-1]]
+        cuts = [x for a, b in zip(ends, ends[1:], strict=False)
+                for x in np.linspace(a, b, 2 + int((b - a) / (2.0 * vol)))[:-1]]
         cuts.append(reach)
         halves = np.diff(cuts)[:, None] / 2
         here = (np.array(cuts)[:-1, None] + halves * (NODES + 1)).ravel()

@@ -83,7 +83,7 @@ def test_intervals_cover(estimator: str):
     """95 % intervals cover in 92 % to 98 % of the runs, though they have only 4,096 paths, and all runs together are
     unbiased."""
     value = CASES[estimator][1]
-    truth = np.array([slope(value, AT, "spot"), slope(value, AT, "vol"), slope(value, AT, "rate"), bend(value, AT, "spot")])
+    truth = np.array([*(slope(value, AT, by) for by in ("spot", "vol", "rate")), bend(value, AT, "spot")])
     values, errors = runs(estimator)
     covered = np.mean(np.abs(values - truth) < 1.96 * errors, axis=0)
     assert np.all((0.92 <= covered) & (covered <= 0.98)), covered

@@ -21,6 +21,17 @@ assets: [harbour]
 payoff: touch
 terms: {kind: one touch, direction: up, barrier: 101, cash: 1, watched: {from: 0y, count: 4, until: 1y}, expiry: 1y}
 """
+FORWARD = """---
+payoff: forward
+about: The level less a strike.
+assets: 1
+terms:
+  strike: {type: level}
+  expiry: {type: date}
+events:
+  - at: expiry
+    pay: spot - strike
+"""
 
 
 @pytest.fixture
@@ -38,8 +49,9 @@ def test_every_greek_says_its_unit_its_error_and_its_estimator(call: Path):
     found = mcx("greeks", call, *ASKED, "--json").json
     assert all(KEYS <= each.keys() for each in found["greeks"])
     units = {key[0]: each["unit"] for key, each in rows(found).items()}
-    assert units == {"delta": "EUR per 1 of spot", "delta for 1 %": "EUR", "vega": "EUR per vol point", "yield": "EUR per bp",
-                     "rho": "EUR per bp", "gamma": "EUR per 1 of spot, for 1 %", "theta": "EUR per calendar day"}
+    assert units == {"delta": "EUR per 1 of spot", "delta for 1 %": "EUR", "vega": "EUR per vol point",
+                     "yield": "EUR per bp", "rho": "EUR per bp", "gamma": "EUR per 1 of spot, for 1 %",
+                     "theta": "EUR per calendar day"}
     assert package.greeks(call, paths=PATHS, seed=SEED).to_dict() | {"seconds": 0} == found | {"seconds": 0}
 
 
@@ -69,8 +81,9 @@ def test_the_terminal_says_what_a_reader_needs(call: Path):
     outcome = mcx("greeks", call, *ASKED, "--bump", "1%", "--ladder", "--spot-moves=-1%,0,1%")
     assert (outcome.code, outcome.err) == (0, "")
     words = " ".join(outcome.out.split())
-    for said in ("delta harbour", "EUR per 1 of spot", "pathwise", "sampling error only", "biased by the size of the move",
-                 "moved by ±1 %", "spots moved together", "forwards move with its spot", "a calendar day on", "no skew",
+    for said in ("delta harbour", "EUR per 1 of spot", "pathwise", "sampling error only",
+                 "biased by the size of the move", "moved by ±1 %", "spots moved together",
+                 "forwards move with its spot", "a calendar day on", "no skew",
                  "licensed professional"):
         assert said in words, said
     assert max(map(len, outcome.out.splitlines())) <= 80
@@ -88,13 +101,12 @@ def test_put_call_parity(tmp_path: Path):
     """Call less put is a forward, in every Greek, on the same paths: the forward's own estimate, to rounding; its gamma
     and vega are nothing."""
     text = CALL + CALL.replace("contract: Call", "---\ncontract: Put").replace("side: call", "side: put")
-    forward = CALL.replace("contract: Call", "---\ncontract: Forward").replace("payoff: european", "payoff: forward").replace(
-        "side: call, ", "") + "---\npayoff: forward\nabout: S less a strike.\nassets: 1\nterms:\n  strike: {type: level}\n" \
-        "  expiry: {type: date}\nevents:\n  - at: expiry\n    pay: spot - strike\n"
+    forward = CALL.replace("contract: Call", "---\ncontract: Forward").replace("european", "forward")
+    forward = forward.replace("side: call, ", "") + FORWARD
     file = written(tmp_path, text + forward + MARKET)
     for estimator in ("pathwise", "likelihood"):
-        call, put, ahead = (rows(each) for each in mcx("greeks", file, "--paths", 1 << 16, "--seed", SEED, "--estimator",
-                                                       estimator, "--json").json["contracts"])
+        outcome = mcx("greeks", file, "--paths", 1 << 16, "--seed", SEED, "--estimator", estimator, "--json")
+        call, put, ahead = map(rows, outcome.json["contracts"])
         for key in call:
             gap = call[key]["value"] - put[key]["value"] - ahead[key]["value"]
             error = sum(each[key]["standard_error"] ** 2 for each in (call, put, ahead)) ** 0.5

@@ -74,8 +74,9 @@ def derivative_tape(
     making.noted(Sum(tape.outputs[0].value))
     size = len(making.derived)
     made = finished(making.builder, tape, (*making.derived, *making.controls, *making.extra))
-    return DerivativeTape(made, range(size), range(size, size + len(making.controls)), tuple(crossed), tuple(curved), tied,
-                          bool(likelihood and making.law.edges))
+    controls = range(size, size + len(making.controls))
+    return DerivativeTape(made, range(size), controls, tuple(crossed), tuple(curved), tied,
+                          rough=bool(likelihood and making.law.edges))
 
 
 class _Making:
@@ -184,7 +185,9 @@ def _later(builder: Builder, tape: Tape, grid: Grid, payments: Sequence[int]) ->
     return found
 
 
-def _running(builder: Builder, tape: Tape, grid: Grid, payments: Sequence[int], later: Iterable[int]) -> dict[int, int | None]:
+def _running(
+    builder: Builder, tape: Tape, grid: Grid, payments: Sequence[int], later: Iterable[int]
+) -> dict[int, int | None]:
     """For each step the flag, known before it, without which none of the later payments is made; None for no such flag.
 
     A score times this flag still has mean zero, and is the better control: where a contract has ended nothing is paid.

@@ -130,7 +130,8 @@ class _Run:
                       self.sampling, base) if self.wish.vol_moves else ()
         notes += [*between(self.ready.dated), *self._near(values)]
         return Found(price, tuple(values), tuple(self.refused), tuple(comparison), tuple(self.choices),
-                     self.methods.jumps, rungs, points, tuple(notes), self.plan, self.sampling.seed, time.perf_counter() - begun)
+                     self.methods.jumps, rungs, points, tuple(notes), self.plan, self.sampling.seed,
+                     time.perf_counter() - begun)
 
     def _wanted(self, subject: str) -> bool:
         """Whether an asset's or a pair's line was asked for; a currency's always is."""
@@ -211,7 +212,8 @@ class _Run:
         valid = self.methods.for_kind(kind)
         if len(valid) < 2:
             return valid[0] if valid else None
-        burden = {method.name: estimate(self._pilot(method)).standard_error**2 * self._bound(method).cost() for method in valid}
+        burden = {method.name: estimate(self._pilot(method)).standard_error**2 * self._bound(method).cost()
+                  for method in valid}
         best = min(valid, key=lambda method: burden[method.name])
         others = ", ".join(f"{_times(burden[method.name], burden[best.name])} {method.name}" for method in valid
                            if method is not best)
@@ -226,9 +228,10 @@ class _Run:
     def _near(self, values: list[Value]) -> Iterator[str]:
         """A word about a first date so near that likelihood ratios scatter."""
         first = self.ready.unrolled.grid.times[1:2]
-        if first and first[0] < NEAR and any(value.what.name == "delta" and value.estimator != PATHWISE for value in values):
-            yield (f"the first simulated date is only {365.0 * first[0]:.3g} days away: the error of a likelihood ratio's "
-                   f"delta grows as the root of that time shrinks, that of its gamma as the time itself does")
+        scored = any(value.what.name == "delta" and value.estimator != PATHWISE for value in values)
+        if scored and first and first[0] < NEAR:
+            yield (f"the first simulated date is only {365.0 * first[0]:.3g} days away: the error of a likelihood "
+                   f"ratio's delta grows as the root of that time shrinks, that of its gamma as the time itself does")
 
     def _moving(self) -> list[Input]:
         """The numbers that a ladder or a grid moves: spots and vols of the assets asked for."""
@@ -255,7 +258,8 @@ class _Run:
             if all(column in at for column in line.columns):
                 weights = np.zeros(len(at))
                 weights[[at[column] for column in line.columns]] = line.factors
-                values.append(Value(line, found.estimate(weights), REVALUATION, _bumped(self.numbers[line.columns[0]], size)))
+                note = _bumped(self.numbers[line.columns[0]], size)
+                values.append(Value(line, found.estimate(weights), REVALUATION, note))
         if self.curvatures:
             pairs = [tuple(self.numbers[column] for column in line.columns) for line in self.curvatures]
             second = second_differences(self.revaluer, self.market, pairs, size, self.sampling, base)

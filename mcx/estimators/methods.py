@@ -134,8 +134,8 @@ def second_order_trouble(tape: Tape, made: DerivativeTape) -> str:
     if any(map(_is_today, tape.instructions)):
         return "the payoff reads today's level itself beside later ones; a second derivative through both is not taken"
     if made.rough:
-        return ("a payment that jumps reads a continuously watched extreme itself: its second-order score has no finite "
-                "variance")
+        return ("a payment that jumps reads a continuously watched extreme itself: its second-order score has no "
+                "finite variance")
     return ""
 
 

@@ -107,7 +107,8 @@ def without_derivative(market: Market, contract: Contract) -> dict[Input, str]:
 
 
 def _nodes(kind: str, subject: str, curve: Curve | None) -> list[Input]:
-    return [Input(kind, subject, node.label, node.quoted.value, node.quoted.place) for node in curve.nodes] if curve else []
+    nodes = curve.nodes if curve else ()
+    return [Input(kind, subject, node.label, node.quoted.value, node.quoted.place) for node in nodes]
 
 
 def _asset(asset: AssetMarket, by: Shifts) -> AssetMarket:

@@ -119,7 +119,8 @@ class MarketMap:
         of the product of their vols."""
         rows = [[covariance_integral(self._vols[i], self._vols[j], start, end) * self._correlation[i, j]
                  for j in assets[: number + 1]] for number, i in enumerate(assets)]
-        covariance = np.empty((len(start), len(assets), len(assets)), dtype=np.result_type(*(x for r in rows for x in r)))
+        kind = np.result_type(*(values for row in rows for values in row))
+        covariance = np.empty((len(start), len(assets), len(assets)), dtype=kind)
         for i, row in enumerate(rows):
             for j, values in enumerate(row):
                 covariance[:, i, j] = covariance[:, j, i] = values

@@ -132,7 +132,8 @@ def _whole(record: Mapping) -> bool:
     """Whether everything is there that a replay reads, one request for each result."""
     match record:
         case {"inputs": [*inputs], "request": [*requests], "results": [*results], "environment": {}}:
-            asked = {"paths", "seed"} if record.get("verb", "price") == "price" else {*REQUEST.get(record["verb"], ("",))}
+            verb = record.get("verb", "price")
+            asked = {"paths", "seed"} if verb == "price" else {*REQUEST.get(verb, ("no such verb",))}
             return (len(requests) == len(results)
                     and all(isinstance(each, dict) and {"file", "text"} <= each.keys() for each in inputs)
                     and all(isinstance(each, dict) and asked <= each.keys() for each in requests))

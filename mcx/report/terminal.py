@@ -67,7 +67,8 @@ class Page:
         widths = _widths([list(column) for column in zip(heads, *rows, strict=True)], words, last, page)
         table = Table(box=None, pad_edge=False, padding=(0, GAP, 0, 0), header_style="bold")
         for number, (head, width) in enumerate(zip(heads, widths, strict=True)):
-            table.add_column(head, width=width, justify=NUMBER if words <= number < len(heads) - last else "left", overflow="fold")
+            side = NUMBER if words <= number < len(heads) - last else "left"
+            table.add_column(head, width=width, justify=side, overflow="fold")
         for row in rows:
             table.add_row(*map(Text, row))
         self.console.width = max(page, INDENT + sum(widths) + GAP * len(widths))
