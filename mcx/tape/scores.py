@@ -19,6 +19,7 @@ from mcx.tape.ops import Op
 from mcx.tape.program import Leaf, LeafKind, Tape
 from mcx.tape.steps import Grid
 
+LEAST = 1e-300
 BRIDGES = (Op.BRIDGE_LOW, Op.BRIDGE_HIGH)
 
 
@@ -248,7 +249,8 @@ class _Scores:
         a rising function, how a level of the function is seen from the bridge; None for anything else."""
         emit, step = self.builder.emit, self.tape.instructions[reader]
         if step.op is Op.EXP:
-            return lambda level: undo(emit(Op.LOG, level))
+            least = self.builder.constant(LEAST)  # no level is below it, and its log is a number
+            return lambda level: undo(emit(Op.LOG, emit(Op.MAX, level, least)))
         if len(step.operands) != 2 or step.operands[0] == step.operands[1]:
             return None
         other = step.operands[1] if step.operands[0] == value else step.operands[0]

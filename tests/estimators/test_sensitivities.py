@@ -19,7 +19,7 @@ assets:
   lantern: {spot: 95, currency: EUR, forwards: {1y: 96, 2y: 97}, vol: 30%}
 correlation: {harbour/lantern: 40%}
 """
-TERMS = {"initial": "{harbour: 200, lantern: 95}", "which": "worst", "side": "put", "strike": 1, "expiry": "1y"}
+TERMS = {"initial": "{harbour: 200, lantern: 95}", "which": "worst", "side": "put", "strike": "100%", "expiry": "1y"}
 
 
 def lines(size: str):

@@ -20,7 +20,7 @@ assets:
   orchard: {spot: 80, currency: EUR, yield: 0%, vol: 24%}
 correlation: {harbour/lantern: 40%, orchard/harbour: -20%, lantern/orchard: 10%}
 """
-CONTRACT = document("basket_option", "[harbour, lantern, orchard]", side="call", strike=1.0,
+CONTRACT = document("basket_option", "[harbour, lantern, orchard]", side="call", strike="100%",
                     weights="{harbour: 0.3, lantern: 0.3, orchard: 0.4}",
                     initial="{harbour: 100, lantern: 50, orchard: 80}", expiry="1.6y")
 
