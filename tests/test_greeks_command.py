@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import signal
 from pathlib import Path
 
 import pytest
@@ -225,6 +226,61 @@ def test_a_changed_record_is_told_by_the_name_of_the_greek(tmp_path: Path, monke
     file.write_text(json.dumps({**stored, "sha256": records._checksum(stored)}), encoding="utf-8")
     found = mcx("replay", file, "--json")
     assert found.code == 1 and found.json["first_difference"].endswith("greeks[vega lantern 3y].value")
+
+
+@pytest.fixture
+def pressed(monkeypatch: pytest.MonkeyPatch):
+    """Ctrl-C once so many batches of 128 paths are done, those of the pilot included."""
+    from mcx.machine.blocks import Crew
+
+    monkeypatch.setattr("mcx.machine.run.batch_for", lambda code, lanes: 128)
+
+    def after(batches: int) -> None:
+        done, run = [0], Crew.run
+
+        def counted(crew, *given):
+            done[0] += 1
+            if done[0] == batches + 1:
+                signal.raise_signal(signal.SIGINT)
+            return run(crew, *given)
+
+        monkeypatch.setattr(Crew, "run", counted)
+
+    return after
+
+
+PILOT = 128  # batches
+
+
+def test_interrupted_with_the_estimates_so_far(call: Path, pressed, tmp_path: Path):
+    """Code 130, the numbers of a run of that length; what had not begun is left out, and no record is written."""
+    short = mcx("greeks", call, "--paths", 40 * 128, "--estimator", "pathwise", "--json").json
+    pressed(PILOT + 40)
+    outcome = mcx("greeks", call, "--paths", 10_000, "--estimator", "pathwise", "--json", "--record",
+                  tmp_path / "r.json")
+    assert outcome.code == 130 and outcome.json["interrupted"] and outcome.json["paths"] == 40 * 128
+    assert outcome.err == "interrupted: no record was written\n" and not (tmp_path / "r.json").exists()
+    assert any("interrupted after 5,120 of 10,000 paths" in warning for warning in outcome.json["warnings"])
+    found, expected = rows(outcome.json), rows(short)
+    assert found.keys() == expected.keys() - {("theta", "", "1 day")}
+    for key, each in found.items():
+        assert each == expected[key]
+
+
+def test_interrupted_among_the_revaluations(call: Path, pressed):
+    """The sensitivities are whole; of what came after only what was done is shown."""
+    pressed(PILOT + 32 + 40)
+    outcome = mcx("greeks", call, "--paths", 4096, "--estimator", "pathwise", "--ladder")
+    assert outcome.code == 130 and outcome.out.startswith("interrupted: the estimates so far\n")
+    assert "theta" in outcome.out and "spots moved together" not in outcome.out
+
+
+@pytest.mark.parametrize("batches", [0, 60, PILOT + 20])
+def test_interrupted_before_anything(call: Path, pressed, batches: int):
+    """In the pilot, or before every part of the run has paths: code 130 and a sentence."""
+    pressed(batches)
+    outcome = mcx("greeks", call, "--paths", 10_000, "--estimator", "pathwise")
+    assert (outcome.code, outcome.out, outcome.err.strip()) == (130, "", "interrupted before there was an estimate")
 
 
 def test_python_takes_texts_and_numbers(call: Path):

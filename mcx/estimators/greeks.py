@@ -73,6 +73,7 @@ class Found:
     plan: Plan
     seed: int
     seconds: float
+    interrupted: bool = False
 
 
 def sensitivities(
@@ -116,6 +117,8 @@ class _Run:
         self.base: tuple[Batches, Estimate] | None = None  # the price of the main run
         self.choices: list[str] = []
         self.refused: list[tuple[Sensitivity | Curvature, str]] = []
+        self.notes: list[str] = []
+        self.interrupted = False
 
     def found(self) -> Found:
         begun = time.perf_counter()
@@ -123,15 +126,21 @@ class _Run:
                  for number, reason in without_derivative(self.market, self.contract).items()}
         values = [*self._first(kinks), *self._second()]
         base, price = self.base or self.revaluer.price(self.market, self.sampling)
-        values.append(self._theta(base))
-        comparison, notes = self._comparison(base)
-        rungs = self._ladder(base)
-        points = grid(self.revaluer, self.market, self._moving(), self.wish.spot_moves or (0.0,), self.wish.vol_moves,
-                      self.sampling, base) if self.wish.vol_moves else ()
-        notes += [*between(self.ready.dated), *self._near(values)]
+        comparison: list[Value] = []
+        rungs: list[Step] = []
+        points: list[Point] = []
+        if not self.interrupted:
+            try:
+                values.append(self._theta(base))
+                comparison += self._comparison(base)
+                rungs += self._ladder(base)
+                points += self._grid(base)
+            except KeyboardInterrupt:
+                self.interrupted = True
+        self.notes += [*between(self.ready.dated), *self._near(values)]
         return Found(price, tuple(values), tuple(self.refused), tuple(comparison), tuple(self.choices),
-                     self.methods.jumps, rungs, points, tuple(notes), self.plan, self.sampling.seed,
-                     time.perf_counter() - begun)
+                     self.methods.jumps, tuple(rungs), tuple(points), tuple(self.notes), self.plan, self.sampling.seed,
+                     time.perf_counter() - begun, self.interrupted)
 
     def _wanted(self, subject: str) -> bool:
         """Whether an asset's or a pair's line was asked for; a currency's always is."""
@@ -164,16 +173,22 @@ class _Run:
         """The coefficients of a method's controls, and what it finds on the pilot; each runs once."""
         if method.name not in self.piloted:
             found = self._bound(method).derivatives(self.pilot)
+            if found.price.paths < self.pilot.paths:
+                raise KeyboardInterrupt
             coefficients = found.fitted()
             self.piloted[method.name] = (coefficients, *found.with_controls(coefficients))
         return self.piloted[method.name]
 
-    def _main(self, method: Method) -> tuple[Batches, Batches]:
-        """First and second derivatives by a method, from the main run."""
+    def _main(self, method: Method) -> tuple[Batches, Batches] | None:
+        """First and second derivatives by a method, from the main run; None after an interruption of another's."""
         if method.name not in self.done:
+            if self.interrupted:
+                return None
+            coefficients = self._pilot(method)[0]
             found = self._bound(method).derivatives(self.sampling)
-            self.done[method.name] = found.with_controls(self._pilot(method)[0])
+            self.done[method.name] = found.with_controls(coefficients)
             self.base = Batches(found.paths, found.base), found.price
+            self.interrupted = found.price.paths < self.sampling.paths
         return self.done[method.name]
 
     def _first(self, kinks: Mapping[int, str]) -> Iterator[Value]:
@@ -186,12 +201,11 @@ class _Run:
             method = self._choice(f"{lines[0].name} of {subject}", kind, lambda pilot: pilot[1].estimate(whole))
             for line in lines:
                 reason = next((kinks[column] for column in line.columns if column in kinks), "")
-                if method is None:
-                    reason = self.methods.why_not(kind)
-                if reason:
-                    self.refused.append((line, reason))
+                found = None if method is None or reason else self._main(method)
+                if found:
+                    yield Value(line, found[0].estimate(line.weights(size)), method.name)
                 else:
-                    yield Value(line, self._main(method)[0].estimate(line.weights(size)), method.name)
+                    self.refused.append((line, reason or self._why_not(method, kind)))
 
     def _family(self, line: Sensitivity) -> tuple[str, str]:
         return self.numbers[line.columns[0]].kind, line.subject
@@ -202,10 +216,14 @@ class _Run:
             weights = np.zeros(len(every))
             weights[every.index(line.assets)] = line.factor
             method = self._choice(f"{line.name} of {line.subject}", "gamma", lambda pilot: pilot[2].estimate(weights))
-            if method is None:
-                self.refused.append((line, self.methods.why_not("gamma")))
+            found = method and self._main(method)
+            if found:
+                yield Value(line, found[1].estimate(weights), method.gamma)
             else:
-                yield Value(line, self._main(method)[1].estimate(weights), method.gamma)
+                self.refused.append((line, self._why_not(method, "gamma")))
+
+    def _why_not(self, method: Method | None, kind: str) -> str:
+        return self.methods.why_not(kind) if method is None else "interrupted before its estimator had run"
 
     def _choice(self, words: str, kind: str, estimate: Callable[[tuple], Estimate]) -> Method | None:
         """The valid estimator with the smallest variance times cost in the pilot; None where none is valid."""
@@ -237,11 +255,11 @@ class _Run:
         """The numbers that a ladder or a grid moves: spots and vols of the assets asked for."""
         return [number for number in self.numbers if number.kind in ("spot", "vol") and self._wanted(number.subject)]
 
-    def _comparison(self, base: Batches) -> tuple[list[Value], list[str]]:
+    def _comparison(self, base: Batches) -> list[Value]:
         """The same sensitivities by revaluation, where a bump was asked for."""
-        size, notes, values = self.wish.bump, [], []
+        size, values = self.wish.bump, []
         if size is None:
-            return values, notes
+            return values
         steps = {}
         for column, number in enumerate(self.numbers):
             if any(column in line.columns for line in self.lines):
@@ -249,7 +267,7 @@ class _Run:
                 reasons = (impossible(self.market, self.contract, {number: side * step}) for side in (1.0, -1.0))
                 reason = next(filter(None, reasons), "")
                 if reason:
-                    notes.append(f"no revaluation for the {number}: moved by {step:g}, {reason}")
+                    self.notes.append(f"no revaluation for the {number}: moved by {step:g}, {reason}")
                 else:
                     steps[number] = step
         found = central_differences(self.revaluer, self.market, steps, self.sampling)
@@ -267,7 +285,13 @@ class _Run:
                 weights = np.zeros(len(pairs))
                 weights[number] = line.factor
                 values.append(Value(line, second.estimate(weights), REVALUATION, _bumped(pairs[number][0], size)))
-        return values, notes
+        return values
+
+    def _grid(self, base: Batches) -> tuple[Point, ...]:
+        if not self.wish.vol_moves:
+            return ()
+        return grid(self.revaluer, self.market, self._moving(), self.wish.spot_moves or (0.0,), self.wish.vol_moves,
+                    self.sampling, base)
 
     def _ladder(self, base: Batches) -> tuple[Step, ...]:
         if not self.wish.spot_moves:

@@ -110,6 +110,7 @@ class GreeksResult(Result):
     seconds: float
     seed: int
     reduction: str
+    interrupted: bool
     estimator: str
     bump: float | None
     assets: tuple[str, ...]
@@ -132,6 +133,12 @@ class GreeksResult(Result):
 
 @dataclass(frozen=True, slots=True)
 class GreeksTable(Result):
-    """Several contracts on one market, in the order of the files."""
+    """Several contracts on one market, in the order of the files. `not_valued` are the titles of those that an
+    interruption left out."""
 
     contracts: tuple[GreeksResult, ...]
+    not_valued: tuple[str, ...] = ()
+
+    @property
+    def interrupted(self) -> bool:
+        return bool(self.not_valued) or any(result.interrupted for result in self.contracts)

@@ -125,13 +125,14 @@ def test_a_crossing_and_the_extreme_itself(condition: str, amount: str):
 
 
 def test_a_barrier_at_nothing_is_never_crossed():
-    """A knock-in at 0 %, watched all the time, leaves every number finite; the option that it guards is worth nothing."""
+    """A knock-in at 0 %, watched all the time, leaves every number finite; what it guards is worth nothing."""
     terms = {"side": "put", "direction": "down", "strike": 100, "watched": "{continuous: [0y, 1y]}", "expiry": "1y"}
-    out, european = (by_name(found(text + ONE, PATHS, SEED, estimator="likelihood").values) for text in (
-        document("barrier", knock="out", barrier=1e-9, **terms), document("european", side="put", strike=100, expiry="1y")))
+    texts = (document("barrier", knock="out", barrier=1e-9, **terms),
+             document("european", side="put", strike=100, expiry="1y"))
+    out, european = (by_name(found(text + ONE, PATHS, SEED, estimator="likelihood").values) for text in texts)
     for key in (("delta", "harbour", ""), ("vega", "harbour", ""), ("gamma", "harbour", "")):
         assert abs(out[key].mean - european[key].mean) < 4 * hypot(out[key].error, european[key].error), key
-    nothing = found(made("low < 0", "1") + "", PATHS, SEED)
+    nothing = found(made("low < 0", "1"), PATHS, SEED)
     assert all(value.estimate.value == 0.0 for value in nothing.values)
 
 
