@@ -18,6 +18,7 @@ from dataclasses import dataclass, replace
 from itertools import accumulate, combinations_with_replacement
 
 from mcx.tape.adjoint import Gradient, finished, of_the_market, on_paths, sums_of, sweep
+from mcx.tape.adjoint_rules import Product
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
 from mcx.tape.program import Leaf, LeafKind, Sum, Tape
@@ -57,14 +58,16 @@ class DerivativeTape:
 
 def derivative_tape(
     tape: Tape, grid: Grid, assets: int, known: Sequence[float | None], *, pathwise: Sequence[int],
-    likelihood: Sequence[int], second: bool,
+    likelihood: Sequence[int], second: bool, proxy: int | None = None,
 ) -> DerivativeTape:
     """From a tape whose only output is the price and two lists that share out its payments.
 
     known    for each value the number that it is on every path, or None
     second   whether second derivatives are taken
+    proxy    a smooth value that stands for the payments taken by likelihood ratio: it is taken off them and added to
+             the others
     """
-    making = _Making(tape, grid, known, pathwise, likelihood)
+    making = _Making(tape, grid, known, pathwise, likelihood, proxy)
     if likelihood:
         making.by_likelihood()
     pairs = pairs_of(assets) if second else []
@@ -83,28 +86,47 @@ class _Making:
     """The sums of a derivative tape under construction."""
 
     def __init__(self, tape: Tape, grid: Grid, known: Sequence[float | None], pathwise: Sequence[int],
-                 likelihood: Sequence[int]):
-        self.tape, self.grid, self.likelihood = tape, grid, likelihood
+                 likelihood: Sequence[int], proxy: int | None):
+        self.tape, self.grid, self.likelihood, self.proxy = tape, grid, likelihood, proxy
         self.builder = Builder.of(tape)
-        self.smooth = sweep(self.builder, _counted(self.builder, pathwise), of_the_market)
-        self.total = self.builder.fold(Op.ADD, pathwise) if pathwise else self.builder.constant(0.0)
-        self.derived, self.controls, self.extra = list(sums_of(self.smooth)), [], []
         self.later = _later(self.builder, tape, grid, likelihood)
+        self.running = _running(self.builder, tape, grid, likelihood, self.later)
+        self.smooth = sweep(self.builder, _counted(self.builder, pathwise), of_the_market)
+        if proxy is not None:
+            self._take_off(proxy)
+        smooth = [*pathwise, *([] if proxy is None else [proxy])]
+        self.total = self.builder.fold(Op.ADD, smooth) if smooth else self.builder.constant(0.0)
+        self.derived, self.controls, self.extra = list(sums_of(self.smooth)), [], []
         last = max(self.later, default=min(1, len(grid.times) - 1))
         self.law: Scores = scores(self.builder, tape, grid, known, last)
         self.slopes = _by_log_spots(self.builder, tape, self.smooth, self.law.spots) if self.smooth else {}
+
+    def _take_off(self, proxy: int) -> None:
+        """The proxy off the later payments of each step, where the contract runs at all, and its gradient to that of
+        the smooth part. The flag is known before the step, so the mean stays what it is for each leaf of the step."""
+        emit = self.builder.emit
+        number = {time: number for number, time in enumerate(self.grid.times)}
+        for value, parts in sweep(self.builder, {proxy: self.builder.constant(1.0)}, of_the_market).items():
+            step = self.builder.instructions[value]
+            flag = self.running.get(number.get(step.payload.end)) if step.op is Op.LEAF else None
+            if flag is not None:
+                parts = [Product(emit(Op.MUL, part.left, flag), part.right) for part in parts]
+            self.smooth.setdefault(value, []).extend(parts)
+        for step, total in self.later.items():
+            flag = self.running[step]
+            part = proxy if flag is None else emit(Op.MUL, proxy, flag)
+            self.later[step] = emit(Op.SUB, total, part)
 
     def by_likelihood(self) -> None:
         """First derivatives of the payments that jump, with their controls."""
         builder, later = self.builder, self.later
         held = {number for number, step in enumerate(self.tape.instructions) if step.op in (Op.STEP, *BRIDGES)}
         self.derived += sums_of(sweep(builder, _counted(builder, self.likelihood), of_the_market, held))
-        running = _running(builder, self.tape, self.grid, self.likelihood, later)
         for score in self.law.first:
             if score.step in later:
                 leaf = builder.leaf(score.leaf)
                 self.derived.append(Sum(later[score.step], score.value, leaf))
-                self.controls.append(Sum(score.value, running[score.step], leaf))
+                self.controls.append(Sum(score.value, self.running[score.step], leaf))
         for edge in self.law.edges if 1 in later else ():
             leaf = builder.leaf(Leaf(LeafKind.LOG_SPOT, asset=edge.asset))
             self.derived.append(Sum(replaced(builder, later[1], edge.extreme, edge.start), edge.weight, leaf))

@@ -105,8 +105,8 @@ class _Run:
         self.numbers = inputs(market, self.contract)
         self.lines = [line for line in first_order(self.numbers, self.contract) if self._wanted(line.subject)]
         self.curvatures = [line for line in second_order(self.numbers, self.contract) if self._wanted(line.subject)]
-        self.methods = methods(ready, market, wish.estimator)
         self.pilot = Sampling(seed, PILOT_PATHS, Stream.PILOT, threads, notice=notice)
+        self.methods = methods(ready, market, wish.estimator, self.pilot)
         self.bound: dict[str, Differentiator] = {}
         self.plan = self._plan(asked)
         counted = progress and (lambda done, _, error: progress(done, self.plan.paths, error))

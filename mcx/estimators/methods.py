@@ -5,17 +5,22 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
+import numpy as np
+
 from mcx.checked.contract import Contract
 from mcx.checked.market import Market
+from mcx.estimators.batches import Sampling
 from mcx.estimators.derivative_tape import DerivativeTape, derivative_tape, without_first_levels
 from mcx.estimators.differentiate import Differentiator
 from mcx.estimators.price import Ready
+from mcx.estimators.proxy import with_proxy
 from mcx.faults import Refusal
 from mcx.leaves.market_map import MarketMap
+from mcx.machine.run import values_by_path
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Instruction, Leaf, LeafKind, Tape
-from mcx.tape.registers import uniform_values
+from mcx.tape.registers import lower, uniform_values
 from mcx.tape.smooth import Jump, jumps, payments
 
 PATHWISE, LIKELIHOOD, MIXED = "pathwise", "likelihood ratio", "mixed"
@@ -59,9 +64,9 @@ class Methods:
         return next((method.refusals[kind] for method in self.valid if kind in method.refusals), self.reason)
 
 
-def methods(ready: Ready, market: Market, asked: str) -> Methods:
-    """The valid estimators among those asked for ('auto' for all). Raises Refusal where what was asked for is not
-    valid, with the condition that forbids it."""
+def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = None) -> Methods:
+    """The valid estimators among those asked for ('auto' for all); with a pilot, likelihood ratios of only what a smooth
+    proxy leaves. Raises Refusal where what was asked for is not valid, with the condition that forbids it."""
     contract, unrolled = ready.dated.contract, ready.unrolled
     price = unrolled.tape.outputs[0]
     tape = without_first_levels(drop_dead_code(replace(unrolled.tape, outputs=(price,), sums=())))
@@ -72,11 +77,20 @@ def methods(ready: Ready, market: Market, asked: str) -> Methods:
     jumping = [payment for payment in paid if found[payment]]
     smooth = [payment for payment in paid if not found[payment]]
     places = tuple({(jump.kind, jump.place): jump for payment in jumping for jump in found[payment]}.values())
-    still = without_own_randomness(dict(zip(tape.leaves, values, strict=True)), contract)
+    leaf_values = dict(zip(tape.leaves, values, strict=True))
+    still = without_own_randomness(leaf_values, contract)
+
+    def by_path(with_basis: Tape) -> np.ndarray:
+        return values_by_path(lower(with_basis, values), seed=pilot.seed, paths=pilot.paths, stream=pilot.stream,
+                              threads=pilot.threads)
 
     def method(name: str, pathwise: list[int], likelihood: list[int]) -> Method:
-        made = derivative_tape(tape, unrolled.grid, len(contract.assets), known, pathwise=pathwise,
-                               likelihood=likelihood, second=not still)
+        own, proxy = tape, None
+        if likelihood and pilot and not still:
+            logs = {leaf.asset: value for leaf, value in leaf_values.items() if leaf.kind is LeafKind.LOG_SPOT}
+            own, proxy = with_proxy(tape, likelihood, logs, by_path)
+        made = derivative_tape(own, unrolled.grid, len(contract.assets), uniform_values(own, values), pathwise=pathwise,
+                               likelihood=likelihood, second=not still, proxy=proxy)
         refusals = {}
         if likelihood and (reason := read_today(tape, known)):
             refusals["spot"] = reason
