@@ -103,7 +103,7 @@ def test_the_check_would_see_a_wrong_error():
 
 @pytest.mark.parametrize("estimator", ["likelihood", "mixed"])
 def test_a_proxy_takes_variance_away(estimator: str):
-    """What is smooth of a jumping payoff is better taken pathwise."""
+    """What is smooth of a jumping payoff is known pathwise, and a control."""
     assert np.all(runs(estimator, True)[0].std(axis=0) < runs(estimator)[0].std(axis=0))
 
 

@@ -1,4 +1,5 @@
-"""Sensitivities to the nodes of curves, to forwards and discount factors, and of assets that are read on other dates."""
+"""Sensitivities to the nodes of curves, to forwards and discount factors, and of assets that are read on other
+dates."""
 
 from __future__ import annotations
 

@@ -18,7 +18,6 @@ from dataclasses import dataclass, replace
 from itertools import accumulate, combinations_with_replacement
 
 from mcx.tape.adjoint import Gradient, finished, of_the_market, on_paths, sums_of, sweep
-from mcx.tape.adjoint_rules import Product
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
 from mcx.tape.program import Leaf, LeafKind, Sum, Tape
@@ -39,9 +38,11 @@ class DerivativeTape:
     """A tape and what its sums are.
 
     derived, controls   derivatives by leaves, and their controls
+    by_score, by_path   derivatives by leaves of a smooth stand-in for what jumps, in both ways: the same in the mean
     crossed             for each pair of spots the two likelihood ratios of the one's pathwise delta by the other
     curved              for each pair the sum with the second-order score, and its control
     tied                by asset the likelihood ratio of the pathwise part, and its delta: the same in the mean
+    stood               for each pair the stand-in times the second-order score, and `crossed` of its own delta
     rough               whether `curved` has no finite variance
 
     The last sum is the price.
@@ -50,9 +51,12 @@ class DerivativeTape:
     tape: Tape
     derived: range
     controls: range
+    by_score: range
+    by_path: range
     crossed: tuple[tuple[Numbers, ...], ...]
     curved: tuple[Numbers, ...]
     tied: dict[int, tuple[Numbers, int]]
+    stood: tuple[tuple[Numbers, ...], ...]
     rough: bool
 
 
@@ -64,21 +68,24 @@ def derivative_tape(
 
     known    for each value the number that it is on every path, or None
     second   whether second derivatives are taken
-    proxy    a smooth value that stands for the payments taken by likelihood ratio: it is taken off them and added to
-             the others
+    proxy    a smooth value that stands for the payments taken by likelihood ratio: it is differentiated by both, and
+    the
+             difference is a control
     """
     making = _Making(tape, grid, known, pathwise, likelihood, proxy)
     if likelihood:
         making.by_likelihood()
     pairs = pairs_of(assets) if second else []
-    crossed = [making.crossed(pair) for pair in pairs]
+    crossed = [making.crossed(pair, making.slopes) for pair in pairs]
     curved = [making.curved(pair) for pair in pairs]
     tied = making.tied() if second else {}
+    stood = [making.stood(pair) for pair in pairs]
     making.noted(Sum(tape.outputs[0].value))
-    size = len(making.derived)
-    made = finished(making.builder, tape, (*making.derived, *making.controls, *making.extra))
-    controls = range(size, size + len(making.controls))
-    return DerivativeTape(made, range(size), controls, tuple(crossed), tuple(curved), tied,
+    groups = making.groups()
+    ends = list(accumulate(len(group) for group in groups))
+    ranges = [range(end - len(group), end) for group, end in zip(groups, ends, strict=True)][:-1]
+    made = finished(making.builder, tape, [part for group in groups for part in group])
+    return DerivativeTape(made, *ranges, tuple(crossed), tuple(curved), tied, tuple(stood),
                           rough=bool(likelihood and making.law.edges))
 
 
@@ -92,30 +99,13 @@ class _Making:
         self.later = _later(self.builder, tape, grid, likelihood)
         self.running = _running(self.builder, tape, grid, likelihood, self.later)
         self.smooth = sweep(self.builder, _counted(self.builder, pathwise), of_the_market)
-        if proxy is not None:
-            self._take_off(proxy)
-        smooth = [*pathwise, *([] if proxy is None else [proxy])]
-        self.total = self.builder.fold(Op.ADD, smooth) if smooth else self.builder.constant(0.0)
+        self.total = self.builder.fold(Op.ADD, pathwise) if pathwise else self.builder.constant(0.0)
         self.derived, self.controls, self.extra = list(sums_of(self.smooth)), [], []
+        self.by_score, self.by_path = [], []  # of the stand-in
         last = max(self.later, default=min(1, len(grid.times) - 1))
         self.law: Scores = scores(self.builder, tape, grid, known, last)
         self.slopes = _by_log_spots(self.builder, tape, self.smooth, self.law.spots) if self.smooth else {}
-
-    def _take_off(self, proxy: int) -> None:
-        """The proxy off the later payments of each step, where the contract runs at all, and its gradient to that of
-        the smooth part. The flag is known before the step, so the mean stays what it is for each leaf of the step."""
-        emit = self.builder.emit
-        number = {time: number for number, time in enumerate(self.grid.times)}
-        for value, parts in sweep(self.builder, {proxy: self.builder.constant(1.0)}, of_the_market).items():
-            step = self.builder.instructions[value]
-            flag = self.running.get(number.get(step.payload.end)) if step.op is Op.LEAF else None
-            if flag is not None:
-                parts = [Product(emit(Op.MUL, part.left, flag), part.right) for part in parts]
-            self.smooth.setdefault(value, []).extend(parts)
-        for step, total in self.later.items():
-            flag = self.running[step]
-            part = proxy if flag is None else emit(Op.MUL, proxy, flag)
-            self.later[step] = emit(Op.SUB, total, part)
+        self.proxy_slopes: dict[int, int] = {}
 
     def by_likelihood(self) -> None:
         """First derivatives of the payments that jump, with their controls."""
@@ -131,17 +121,48 @@ class _Making:
             leaf = builder.leaf(Leaf(LeafKind.LOG_SPOT, asset=edge.asset))
             self.derived.append(Sum(replaced(builder, later[1], edge.extreme, edge.start), edge.weight, leaf))
             self.controls.append(Sum(edge.weight, None, leaf))
+        if self.proxy is not None:
+            self._stand_in(self.proxy)
+
+    def _stand_in(self, proxy: int) -> None:
+        """The stand-in by its scores and by its gradient, for each leaf times the flag that is known before the leaf's
+        step, so that the means stay the same."""
+        emit, builder = self.builder.emit, self.builder
+        number = {time: number for number, time in enumerate(self.grid.times)}
+        gradient = sweep(builder, {proxy: builder.constant(1.0)}, of_the_market)
+        for value, parts in gradient.items():
+            step = builder.instructions[value]
+            last = number[step.payload.end] if step.op is Op.LEAF else 1  # else the log spot with the first drift
+            if (last or 1) in self.later:
+                flag = self.running[last or 1]
+                self.by_path += [Sum(part.left if flag is None else emit(Op.MUL, part.left, flag), part.right, value)
+                                 for part in parts]
+        held = {step: proxy if flag is None else emit(Op.MUL, proxy, flag) for step, flag in self.running.items()}
+        self.by_score += [Sum(held[score.step], score.value, builder.leaf(score.leaf)) for score in self.law.first
+                          if score.step in held]
+        for edge in self.law.edges if 1 in held else ():
+            self.by_score.append(Sum(proxy, edge.weight, builder.leaf(Leaf(LeafKind.LOG_SPOT, asset=edge.asset))))
+        self.proxy_slopes = _by_log_spots(builder, self.tape, gradient, self.law.spots)
+
+    def groups(self) -> tuple[list[Sum], ...]:
+        """All sums, in their order."""
+        return self.derived, self.controls, self.by_score, self.by_path, self.extra
 
     def noted(self, *sums: Sum) -> Numbers:
         """The numbers of further sums; all first derivatives stand before them."""
-        first = len(self.derived) + len(self.controls) + len(self.extra)
+        first = sum(map(len, self.groups()))
         self.extra += sums
         return tuple(range(first, first + len(sums)))
 
-    def crossed(self, pair: tuple[int, int]) -> tuple[Numbers, ...]:
-        if not all(asset in self.slopes for asset in pair):
+    def crossed(self, pair: tuple[int, int], slopes: dict[int, int]) -> tuple[Numbers, ...]:
+        if not all(asset in slopes for asset in pair):
             return ()
-        return tuple(self.noted(*self._by_score(self.slopes[one], other)) for one, other in (pair, pair[::-1]))
+        return tuple(self.noted(*self._by_score(slopes[one], other)) for one, other in (pair, pair[::-1]))
+
+    def stood(self, pair: tuple[int, int]) -> tuple[Numbers, ...]:
+        if pair not in self.law.second or 1 not in self.later or not all(asset in self.proxy_slopes for asset in pair):
+            return ()
+        return self.noted(Sum(self.proxy, self.law.second[pair])), *self.crossed(pair, self.proxy_slopes)
 
     def curved(self, pair: tuple[int, int]) -> Numbers:
         if 1 not in self.later or pair not in self.law.second:

@@ -24,12 +24,13 @@ from mcx.tape.adjoint import leaf_sums
 from mcx.tape.program import Program
 from mcx.tape.registers import lower
 
-CONTROLS = 5  # of a second derivative: two scores, the second-order one, that of its delta, both deltas' difference
+CONTROLS = 6  # of a second derivative: two scores, the second-order one, that of its delta, both deltas' difference,
+# and the difference of both second derivatives of a stand-in
 
 
 @dataclass(frozen=True, slots=True)
 class Coefficients:
-    """Of the controls: first (numbers,), second (pairs, controls)."""
+    """Of the controls: first (numbers, 2), second (pairs, CONTROLS)."""
 
     first: np.ndarray
     second: np.ndarray
@@ -39,9 +40,9 @@ class Coefficients:
 class Derivatives:
     """What one run finds, by parts of the run, without the controls and the controls beside it.
 
-    paths (64,); first and its control (64, numbers): by the inputs in their order; second (64, pairs) and its controls
-    (64, pairs, controls): by the pairs of spots, each asset with itself first; the price of the same paths, by parts
-    (64, 1) and as a whole.
+    paths (64,); first (64, numbers) and its controls (64, numbers, 2): by the inputs in their order; second (64, pairs)
+    and its controls (64, pairs, CONTROLS): by the pairs of spots, each asset with itself first; the price of the same
+    paths, by parts (64, 1) and as a whole.
     """
 
     paths: np.ndarray
@@ -54,13 +55,13 @@ class Derivatives:
 
     def fitted(self) -> Coefficients:
         """Coefficients that leave the smallest variance on these paths."""
-        first = np.array([_fit(self.first[:, k], self.control[:, k : k + 1])[0] for k in range(self.first.shape[1])])
+        first = np.array([_fit(self.first[:, k], self.control[:, k]) for k in range(self.first.shape[1])])
         second = np.array([_fit(self.second[:, k], self.controls[:, k]) for k in range(self.second.shape[1])])
         return Coefficients(first, second.reshape(self.controls.shape[1:]))
 
     def with_controls(self, coefficients: Coefficients) -> tuple[Batches, Batches]:
         """First and second derivatives, as quantities by parts of the run."""
-        first = self.first - coefficients.first * self.control
+        first = self.first - np.einsum("bnc,nc->bn", self.control, coefficients.first)
         second = self.second - np.einsum("bpc,pc->bp", self.controls, coefficients.second)
         return Batches(self.paths, first), Batches(self.paths, second)
 
@@ -95,9 +96,12 @@ class Differentiator:
     def derivatives(self, sampling: Sampling) -> Derivatives:
         """One run. Raises what `Sampling.sums` raises."""
         sums, price = sampling.sums(self.program)
-        first, control = (leaf_sums(self.made.tape, self.values, sums.means, chosen) @ self.by_number
-                          for chosen in (self.made.derived, self.made.controls))
-        second, controls = self._second(sums.means, first, control)
+        made = self.made
+        first, score, by_score, by_path = (
+            leaf_sums(made.tape, self.values, sums.means, chosen) @ self.by_number
+            for chosen in (made.derived, made.controls, made.by_score, made.by_path))
+        second, controls = self._second(sums.means, first, score)
+        control = np.stack([score, by_score - by_path], axis=-1)
         return Derivatives(sums.paths, first, control, second, controls, sums.means[:, -1:], price)
 
     def _second(self, sums: np.ndarray, first: np.ndarray, control: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -121,6 +125,9 @@ class Differentiator:
                 if one in made.tied:
                     by_score, delta = made.tied[one]
                     controls[:, pair, 4] = sums[:, by_score[0::2]].sum(axis=1) - sums[:, delta]
+            if made.stood[pair]:
+                (bent,), *both = made.stood[pair]
+                controls[:, pair, 5] = sums[:, bent] - 0.5 * sum(sums[:, parts[0::2]].sum(axis=1) for parts in both)
             second[:, pair] /= levels[0] * levels[1]
             controls[:, pair] /= levels[0] * levels[1]
         return second, controls

@@ -22,5 +22,5 @@ def finite(ready: Ready) -> Iterator[None]:
         raise Refusal(f"'{ready.dated.contract.title}': '{output}' is not a finite number on path {trouble.path} (seed "
                       f"{trouble.seed}, stream {trouble.stream}); {WHY}") from None
     except NonFiniteSum as trouble:
-        raise Refusal(f"'{ready.dated.contract.title}': a derivative is not a finite number on one of the 64 paths from "
-                      f"{trouble.first_path} on (seed {trouble.seed}, stream {trouble.stream}); {WHY}") from None
+        raise Refusal(f"'{ready.dated.contract.title}': a derivative is not a finite number on one of the 64 paths "
+                      f"from {trouble.first_path} on (seed {trouble.seed}, stream {trouble.stream}); {WHY}") from None

@@ -65,8 +65,8 @@ class Methods:
 
 
 def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = None) -> Methods:
-    """The valid estimators among those asked for ('auto' for all); with a pilot, likelihood ratios of only what a smooth
-    proxy leaves. Raises Refusal where what was asked for is not valid, with the condition that forbids it."""
+    """The valid estimators among those asked for ('auto' for all); with a pilot, likelihood ratios have a smooth
+    stand-in as a control. Raises Refusal where what was asked for is not valid, with the condition that forbids it."""
     contract, unrolled = ready.dated.contract, ready.unrolled
     price = unrolled.tape.outputs[0]
     tape = without_first_levels(drop_dead_code(replace(unrolled.tape, outputs=(price,), sums=())))

@@ -1,5 +1,5 @@
-"""A smooth stand-in for payments that jump: what it explains of them is differentiated pathwise, and only the rest by
-likelihood ratio, whose variance is that of what it multiplies.
+"""A smooth stand-in for payments that jump. It is differentiated pathwise and by likelihood ratio, which agree in the
+mean: the difference is a control for the likelihood ratio of the payments themselves.
 
 It is a sum of calls and puts on the last levels, with coefficients from a regression on the pilot's paths: fixed before
 the run that counts, so that nothing is biased.
