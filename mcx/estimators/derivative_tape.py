@@ -68,9 +68,8 @@ def derivative_tape(
 
     known    for each value the number that it is on every path, or None
     second   whether second derivatives are taken
-    proxy    a smooth value that stands for the payments taken by likelihood ratio: it is differentiated by both, and
-    the
-             difference is a control
+    proxy    a smooth value that stands for the payments taken by likelihood ratio: it is differentiated in both ways,
+             and the difference is a control
     """
     making = _Making(tape, grid, known, pathwise, likelihood, proxy)
     if likelihood:

@@ -29,7 +29,8 @@ def case(text: str, number: int = 0):
     tape = made.unrolled.tape
     tape = drop_dead_code(replace(tape, outputs=tape.outputs[:1]))
     values = MarketMap(market, made.dated.contract).values(tape.leaves)
-    spots = {leaf.asset: value for leaf, value in zip(tape.leaves, values, strict=True) if leaf.kind is LeafKind.LOG_SPOT}
+    spots = {leaf.asset: value for leaf, value in zip(tape.leaves, values, strict=True)
+             if leaf.kind is LeafKind.LOG_SPOT}
 
     def by_path(part: Tape) -> np.ndarray:
         return values_by_path(lower(part, values), seed=SEED, paths=1 << 14, stream=Stream.PILOT)
