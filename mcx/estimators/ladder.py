@@ -57,8 +57,8 @@ def ladder(
     revaluer: Revaluer, market: Market, numbers: Sequence[Input], moves: Sequence[float], sampling: Sampling,
     base: Batches, deltas: Deltas,
 ) -> tuple[Step, ...]:
-    """The price at each of the moves of the spots among `numbers`, and what `deltas` gives there, if anything. `base` is the
-    price as it stands."""
+    """The price at each of the moves of the spots among `numbers`, and what `deltas` gives there, if anything. `base`
+    is the price as it stands."""
     markets = [moved(market, spot_shifts(numbers, move)) for move in moves]
     flags = [today(revaluer.tape, there, revaluer.contract) for there in markets]
     found = []
@@ -75,7 +75,8 @@ def grid(
     revaluer: Revaluer, market: Market, numbers: Sequence[Input], spot_moves: Sequence[float],
     vol_moves: Sequence[float], sampling: Sampling, base: Batches,
 ) -> tuple[Point, ...]:
-    """The price at every pair of moves: spots by a share of themselves, every vol by a sum. `base` is the price as it stands."""
+    """The price at every pair of moves: spots by a share of themselves, every vol by a sum. `base` is the price as it
+    stands."""
     found = []
     for vol_move in vol_moves:
         vols = {number: vol_move for number in numbers if number.kind == "vol"}

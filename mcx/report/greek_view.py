@@ -15,6 +15,8 @@ def show_greeks(result: GreeksResult, page: Page) -> None:
     percent = result.notional is not None
     factor, unit = (100.0, "%") if percent else (1.0, f"{result.currency} per unit")
     places = decimals(result.standard_error * factor, 2, 2 if percent else 4)
+    if result.interrupted:
+        page.line("interrupted: the estimates so far", style="bold")
     page.line(f"{result.contract} ({result.payoff})", style="bold")
     page.named((
         ("valued on", result.valuation or "time 0"),
