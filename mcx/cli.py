@@ -191,9 +191,9 @@ def main(arguments: list[str] | None = None) -> None:
         _complain(str(trouble))
         sys.exit(WRONG)
     except click.ClickException as trouble:
-        context = getattr(trouble, "ctx", None)
-        hint = f" (see '{context.command_path} --help')" if context else ""
-        _complain(f"{trouble.format_message().rstrip('.')}{hint}")
+        context, said = getattr(trouble, "ctx", None), trouble.format_message().rstrip(".")
+        hint = f" (see '{context.command_path} --help')" if context and "\n" not in said else ""  # many lines: the help
+        _complain(f"{said}{hint}")
         sys.exit(WRONG)
     except (KeyboardInterrupt, click.Abort):
         _complain("interrupted before there was an estimate")
