@@ -10,8 +10,10 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from mcx.checked.library import Definitions, shipped_names, shipped_text
+from mcx.checked.library import Definitions, shipped, shipped_names, shipped_text
 from mcx.checked.load import NO_FUNDING, Request, checked_request, load, request
+from mcx.checked.payoff import MULTIPLES
+from mcx.checked.read_payoff import read_payoff
 from mcx.dates.dating import date_contract
 from mcx.faults import InputError
 from mcx.text.documents import parse_documents
@@ -297,6 +299,27 @@ def test_funding_of_options_is_an_assumption():
     assert asked.contracts[0].assumptions == (NO_FUNDING,)
     asked, _ = made(OPTION, TEXTBOOK.replace("rates", "funding: {EUR: 10 bp}\nrates"))
     assert asked.contracts[0].assumptions == ()
+
+
+def test_funding_of_a_note_is_stated_whatever_its_size_is_called():
+    """A payment of part 'bond' is an issuer's promise, also of a definition that leaves it open what amounts are."""
+    own = ("payoff: own\nterms: {expiry: {type: date}}\nevents:\n  - {at: expiry, pay: 1, part: bond}\n"
+           "  - {at: expiry, pay: spot, part: option}\n")
+    note = OPTION.replace("payoff: european", "payoff: own").replace("side: call, strike: 100, ", "")
+    said = ("b.yaml:1:9: no funding spread for 'EUR', the currency of the note 'Call'; write 'funding: {EUR: 0 bp}' to "
+            "value it without the issuer's spread")
+    assert made(note, TEXTBOOK, own)[1] == [said]
+    funded = TEXTBOOK.replace("rates", "funding: {EUR: 0 bp}\nrates")
+    assert made(note, funded, own)[1] == []
+    assert made(note, TEXTBOOK, own.replace("bond", "option"))[1] == []
+
+
+def test_shipped_notes_take_a_notional():
+    """Every shipped definition with a bond in it says that its amounts are multiples of the notional."""
+    for name in shipped_names():
+        payoff, _ = read_payoff(shipped(name))
+        if any(pay.part == "bond" for pay in payoff.payments()):
+            assert payoff.pays == MULTIPLES, name
 
 
 MOST_WORDS = ["", "-1", "0", "70", "nan", "1e999", "[]", "{}", "[1, 2]", "{a: 1}", "2026-02-30", "9999-12-31",
