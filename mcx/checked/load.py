@@ -240,7 +240,10 @@ def correlations_known(pair: Pair) -> list[Fault]:
     place = _place(pair.market_body, "correlation" if "correlation" in pair.market_body else "market")
     missing = [f"{a}/{b}" for a, b in combinations(known, 2) if (a, b) not in stated and (b, a) not in stated]
     if missing:
-        return [Fault(place, f"no correlation for {listed(missing)}")]
+        lines = [f"{names}: NUMBER%" for names in missing]
+        line = f"{listed(lines)} under 'correlation'" if "correlation" in pair.market_body else \
+            f"'correlation: {{{', '.join(lines)}}}'"
+        return [Fault(place, f"no correlation for {listed(missing)}; write {line}")]
     quoted = pair.market.correlation | {names[::-1]: one for names, one in pair.market.correlation.items()}
     if len(known) < 3 or any(names not in quoted for names in combinations(known, 2)):
         return []

@@ -147,9 +147,11 @@ SLIPS = [
     (MARKET, "funding: {EUR: 0 bp}", "source: screen",
      ["b.yaml:1:9: no funding spread for 'EUR', the currency of the note 'Worst-of put'; write 'funding: "
       "{EUR: 0 bp}' to value it without the issuer's spread"]),
-    (MARKET, ", quarry/orchard: 55%", "", ["b.yaml:8:14: no correlation for 'quarry/orchard'"]),
+    (MARKET, ", quarry/orchard: 55%", "",
+     ["b.yaml:8:14: no correlation for 'quarry/orchard'; write 'quarry/orchard: NUMBER%' under 'correlation'"]),
     (MARKET, "correlation: {harbour/quarry: 60%, harbour/orchard: 65%, quarry/orchard: 55%}\n", "",
-     ["b.yaml:1:9: no correlation for 'harbour/quarry', 'harbour/orchard' and 'quarry/orchard'"]),
+     ["b.yaml:1:9: no correlation for 'harbour/quarry', 'harbour/orchard' and 'quarry/orchard'; write 'correlation: "
+      "{harbour/quarry: NUMBER%, harbour/orchard: NUMBER%, quarry/orchard: NUMBER%}'"]),
 ]
 
 
@@ -214,7 +216,8 @@ def test_currency_of_the_asset():
                                           "rate of exchange; write 'fx: {EUR per USD: {spot: ..., vol: ...}}'"]
     market = market.replace("correlation:", "fx: {USD per EUR: {spot: 1.1, vol: 8%}}\ncorrelation:")
     assert made(composite, market)[1] == ["b.yaml:9:14: no correlation for 'harbour/USD per EUR', 'quarry/USD per EUR' "
-                                          "and 'orchard/USD per EUR'"]
+                                          "and 'orchard/USD per EUR'; write 'harbour/USD per EUR: NUMBER%', "
+                                          "'quarry/USD per EUR: NUMBER%' and 'orchard/USD per EUR: NUMBER%' under 'correlation'"]
     assert made(CONTRACT.replace("currency: EUR", "currency: EUR\nconversion: {harbour: quanto}"), MARKET)[1] == [
         "a.yaml:3:14: 'harbour' is quoted in EUR, the contract's currency: there is nothing to convert"]
 
