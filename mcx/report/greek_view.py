@@ -37,7 +37,7 @@ def show_greeks(result: GreeksResult, page: Page) -> None:
         page.heading("for comparison: revaluation on the same random numbers, biased by the size of the move")
         page.table(("", "value", "error", "unit", ""), (_row(greek, greek.note) for greek in result.comparison), last=2)
     if result.jumps:
-        page.heading("the payoff jumps here: no pathwise estimate of the payments behind it")
+        page.heading("the payoff jumps here, or has no bounded slope: no pathwise estimate of the payments behind it")
         page.items(f"{jump.kind} at {jump.place or 'an unnamed place'}" for jump in result.jumps)
     if result.ladder:
         page.heading("spots moved together, same random numbers")
