@@ -111,7 +111,8 @@ def test_a_division_by_what_may_be_zero_is_a_jump(formula: str):
 
 
 @pytest.mark.parametrize("formula", ["sqrt(max(spot - strike, 0))", "abs(spot - strike) ** 0.1",
-                                     "sqrt(abs(spot - strike))", "log(abs(spot - strike))", "((spot - strike) ** 2) ** 0.25"])
+                                     "sqrt(abs(spot - strike))", "log(abs(spot - strike))",
+                                     "((spot - strike) ** 2) ** 0.25"])
 def test_a_root_or_log_of_what_may_be_zero_has_no_bounded_slope(formula: str):
     """It does not jump, or not by a finite amount; its slopes path by path have no finite variance."""
     assert kinds(price_jumps(event("end", pay(formula)))) == ["root"]
