@@ -119,8 +119,8 @@ def greeks(files: tuple[str, ...], as_json: bool, ladder: bool, grid: bool, spot
 
     if vol_moves is not None and not grid or spot_moves is not None and not (ladder or grid):
         raise click.UsageError("'--spot-moves' goes with '--ladder' or '--grid', '--vol-moves' with '--grid'")
-    moves = {"spot_moves": spot_moves or MOVES if ladder or grid else (),
-             "vol_moves": vol_moves or MOVES if grid else ()}
+    moves = {"spot_moves": (MOVES if spot_moves is None else spot_moves) if ladder or grid else (),
+             "vol_moves": (MOVES if vol_moves is None else vol_moves) if grid else ()}
     with _progress() as (progress, notice):
         result = api.greeks(*files, progress=progress, notice=notice, **moves, **wishes)
     _show(result, as_json, _greeks_view)

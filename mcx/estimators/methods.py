@@ -105,7 +105,7 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
     reason = f"the payoff jumps, and {still}" if still else ""
     if asked == "pathwise" and jumping:
         raise Refusal(f"'{contract.title}': no pathwise estimate, since the payoff jumps at {_listed(places)}; such an "
-                      f"estimate would miss the jump and show a small error")
+                      f"estimate would miss that and show a small error")
     if asked in ("likelihood", "mixed") and still and (jumping or asked == "likelihood"):
         raise Refusal(f"'{contract.title}': no likelihood ratio, since {still}")
     valid = []
