@@ -108,6 +108,15 @@ class BusinessDays:
 
 
 @dataclass(frozen=True, slots=True)
+class Known:
+    """What a contract states about a date of its past: a value (flags as 1.0 and 0.0), a level, a factor, or another
+    date."""
+
+    value: float | datetime.date
+    place: Place
+
+
+@dataclass(frozen=True, slots=True)
 class Contract:
     """One trade. Exactly one of `notional` and `units` is given. `textbook` contracts use times, others dates.
 
@@ -131,6 +140,9 @@ class Contract:
     payment_calendar: BusinessDays | None = None  # None: payments go by `calendar`
     textbook: bool = False
     conversion: dict[str, str] = field(default_factory=dict)  # 'quanto' or 'composite', by asset
+    happened: dict[str, dict[datetime.date, Known]] = field(default_factory=dict)  # by running value, as of the close
+    disruption: dict[str, dict[datetime.date, Known]] = field(default_factory=dict)  # by asset and scheduled date
+    adjustments: dict[str, dict[datetime.date, Known]] = field(default_factory=dict)  # by asset, from the date on
     text: str = ""
     assumptions: tuple[str, ...] = ()
     at_fault: frozenset[str] = frozenset()

@@ -16,6 +16,7 @@ from mcx.checked.conversions import read_conversion
 from mcx.checked.day_count_names import day_count_name
 from mcx.checked.formula import Formula, Name, walk
 from mcx.checked.payoff import MONEY, MULTIPLES, Assign, Pay, Payoff
+from mcx.checked.read_history import read_adjustments, read_disruption, read_happened
 from mcx.checked.read_payoff import read_payoff
 from mcx.checked.read_terms import read_terms
 from mcx.checked.reading import (
@@ -36,10 +37,11 @@ from mcx.text.located import Document, Mapping, Node, Scalar, Sequence
 from mcx.text.scalars import date, expected, period, shortened, word
 
 KEYS = ("contract", "currency", "notional", "units", "assets", "start", "day_count", "settlement", "calendar",
-        "payment_calendar", "conversion", "payoff", "terms")
+        "payment_calendar", "conversion", "payoff", "terms", "happened", "disruption", "adjustments")
 REQUIRED = ("contract", "currency", "assets", "payoff", "terms")
 CALENDAR_KEYS = ("start", "day_count", "settlement", "calendar", "payment_calendar")  # not for textbook contracts
-LATER = ("happened", "fixings", "adjustments", "rounding", "disruption")
+LATER = ("rounding",)
+PAST = ("happened", "disruption", "adjustments")
 LONGEST_LAG = 250  # business days, a year
 OPEN = ("in all", "in any")
 ROLLS = ("following", "modified following", "preceding")
@@ -75,7 +77,9 @@ def read_contract(
         title=title, currency=currency or "", assets=assets, payoff=_begun(payoff, values), terms=values,
         place=body.get("contract").place, notional=size.get("notional"), units=size.get("units"), start=start,
         day_count=day_count or "", settlement=settlement, calendar=calendar, payment_calendar=payment_calendar,
-        textbook=textbook, conversion=conversion, text=document.text, terms_place=(terms or body).place,
+        textbook=textbook, conversion=conversion, happened=read_happened(body.get("happened"), payoff, faults),
+        disruption=read_disruption(body.get("disruption"), assets, faults),
+        adjustments=read_adjustments(body.get("adjustments"), assets, faults), text=document.text, terms_place=(terms or body).place,
         at_fault=reader.at_fault,
         framed=not frame and (textbook or (start and settlement and calendar) is not None),
     ), faults + frame
@@ -240,7 +244,7 @@ def _check_keys(body: Mapping, dated: bool, payoff: Payoff, faults: list[Fault])
     check_keys(body, KEYS, (*REQUIRED, *(("start", "settlement", "calendar") if dated else ())), faults, "the contract",
                LATER)
     if not dated:
-        for key in CALENDAR_KEYS:
+        for key in (*CALENDAR_KEYS, *PAST):
             if key in body:
                 text = f"'{key}' belongs to contracts with calendar dates; this one uses times"
                 faults.append(Fault(body.key(key).place, text))
