@@ -16,6 +16,7 @@ from typing import TYPE_CHECKING
 from mcx.checked.load import Request, checked_request
 from mcx.dates.dated_contract import DatedContract
 from mcx.dates.dating import date_contract
+from mcx.dates.history import history_of
 from mcx.faults import Fault, InputError, Place, Refusal, RequestError, did_you_mean
 from mcx.text.documents import read_documents
 from mcx.text.located import Document
@@ -238,18 +239,20 @@ def _all_dated(made: Request, faults: Iterable[Fault]) -> list[DatedContract]:
     """Every contract of a request with its dates; raises InputError with all faults."""
     faults, dated = list(faults), []
     for contract in made.contracts:
-        found, wrong = date_contract(contract, made.market.valuation if made.market else None)
-        faults += wrong
+        history, wrong = history_of(contract, made.market)
+        found, late = date_contract(contract, made.market.valuation if made.market else None, history)
+        faults += [*wrong, *late]
         if found is not None:
             dated.append(found)
     if faults:
-        raise InputError([*faults, *_watches_refused(dated)])
+        raise InputError([*faults, *_refused(dated)])
     return dated
 
 
-def _watches_refused(dated: Iterable[DatedContract]) -> list[Fault]:
-    """The continuous watches that cannot be simulated, so that they are told beside the faults of the documents."""
-    watched = [each for each in dated if each.watches]
+def _refused(dated: Iterable[DatedContract]) -> list[Fault]:
+    """Continuous watches that cannot be simulated and fixings that are missing, so that they are told beside the faults
+    of the documents."""
+    watched = [each for each in dated if each.watches or each.moments[0].day.time < 0.0]
     if not watched:
         return []
     from mcx.tape.unroll import unroll
@@ -359,7 +362,7 @@ def _on_levels(dated: DatedContract, path: File):
     except (OSError, ValueError) as error:
         raise RequestError(f"{file}: the levels cannot be read: {getattr(error, 'strerror', None) or error}") from None
     levels, faults = read_levels(data, file, dated)
-    unrolled = unroll(dated, nodes=())
+    unrolled = unroll(dated, nodes=(), given=True)
     faults += unrolled.faults
     if not faults:
         found, faults = run_levels(dated, unrolled.observed, levels, file)

@@ -11,17 +11,10 @@ from dataclasses import dataclass
 
 from mcx.checked.contract import Contract
 from mcx.checked.payoff import Event, Pay, Running
+from mcx.dates.day import Day
+from mcx.dates.history import NO_HISTORY, History
 
-
-@dataclass(frozen=True, slots=True)
-class Day:
-    """A point in time: years from the valuation date (Actual/365 Fixed) and the date (None in textbook contracts)."""
-
-    time: float
-    date: datetime.date | None = None
-
-    def __str__(self) -> str:
-        return self.date.isoformat() if self.date else f"{self.time:.10g}y"
+__all__ = ["Day", "DatedContract", "DatedEvent", "Moment", "Occasion", "Update", "Watch"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -86,7 +79,8 @@ class DatedContract:
     """Moments in order of time, and the continuous watches beside them.
 
     `schedules` gives the days of every date, dates and (dated) watch term. `calendar_version` names the holiday
-    package and its version, '' where no holidays were asked for. `assumptions` are sentences to print with any value.
+    package and its version, '' where no holidays were asked for. `assumptions` are sentences to print with any value. `history` is
+    what is known of its past.
     """
 
     contract: Contract
@@ -97,6 +91,7 @@ class DatedContract:
     watches: tuple[Watch, ...]
     calendar_version: str = ""
     assumptions: tuple[str, ...] = ()
+    history: History = NO_HISTORY
 
     @property
     def last(self) -> Day:

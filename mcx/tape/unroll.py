@@ -11,16 +11,19 @@ from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field
 
 from mcx.checked.formula import Formula, Name, Previous
+from mcx.checked.kinds import Kind
 from mcx.checked.payoff import Action, Assign, End, Event, Pay, Running
 from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Occasion, Update
 from mcx.faults import Fault, Place
 from mcx.tape.builder import Builder
 from mcx.tape.formulas import Formulas, Scene, Unreadable, Values
 from mcx.tape.ledger import Ledger
+from mcx.tape.observations import Observations
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Instruction, Leaf, LeafKind, LevelKey, Output, Tape
 from mcx.tape.running import Observed, Watched
+from mcx.tape.state import PastEvent, Settled, State
 from mcx.tape.steps import PLAIN, Grid, Makeup, expand_levels
 from mcx.tape.watching import conflicts
 
@@ -50,6 +53,7 @@ class Unrolled:
     observed  the same contract still reading LEVEL, LOW and HIGH: its meaning on given levels
     grid      the simulated times and assets
     levels    for each 'level' output, by its name, the asset's number and the time: its mean is the forward
+    state     what fixings have settled already
     """
 
     tape: Tape
@@ -57,21 +61,25 @@ class Unrolled:
     grid: Grid
     levels: dict[str, tuple[int, float]]
     watches: tuple[WatchNote, ...]
+    state: State
     faults: tuple[Fault, ...] = ()
 
 
-def unroll(dated: DatedContract, *, nodes: Sequence[float], makeup: Makeup = PLAIN) -> Unrolled:
+def unroll(dated: DatedContract, *, nodes: Sequence[float], makeup: Makeup = PLAIN, given: bool = False) -> Unrolled:
     """The tape of a contract; `nodes` are the times of the market's curve points (`MarketMap.nodes`), `makeup` how
-    levels come about (`MarketMap.makeup`)."""
+    levels come about (`MarketMap.makeup`). A missing fixing is a fault unless levels will be `given`."""
     walk = _Walk(dated)
     walk.run()
     observed = drop_dead_code(walk.builder.tape(walk.ledger.outputs()))
-    faults = walk.faults or conflicts(observed) or _unknown_laws(observed, makeup)
+    missing = [] if given else walk.observations.missing(observed)
+    faults = [*(walk.faults or conflicts(observed) or _unknown_laws(observed, makeup)), *missing]
     if faults:
-        return Unrolled(Tape((), ()), Tape((), ()), Grid((0.0,), ()), {}, (), tuple(sorted(set(faults))))
+        return Unrolled(Tape((), ()), Tape((), ()), Grid((0.0,), ()), {}, (), State(), tuple(sorted(set(faults))))
+    if given:
+        return Unrolled(Tape((), ()), observed, Grid((0.0,), ()), {}, walk.notes(makeup), walk.state)
     observed, levels = _with_last_levels(observed, dated.contract.assets)
     tape, grid = expand_levels(observed, nodes, makeup)
-    return Unrolled(tape, observed, grid, levels, walk.notes(makeup))
+    return Unrolled(tape, observed, grid, levels, walk.notes(makeup), walk.state)
 
 
 def last_read(dated: DatedContract) -> float:
@@ -127,6 +135,8 @@ class _Walk:
         self.dated = dated
         payoff = dated.contract.payoff
         self.builder = Builder()
+        self.observations = Observations(dated, self.builder)
+        self.state = State()
         self.formulas = Formulas(dated.contract, self.builder)
         self.ledger = Ledger.opened(self.builder, payoff)
         self.alive = self.builder.constant(1.0)
@@ -141,11 +151,7 @@ class _Walk:
             if running.how == "set":
                 self.settable[running.name] = start
             elif running.name in watches:
-                watch = watches[running.name]
-                if watch.start.time < 0.0:
-                    text = f"watched from {watch.start}, before the valuation date"
-                    self.faults.append(Fault(running.place, text))
-                self.observed[running.name] = Watched(watch, self.formulas, start)
+                self.observed[running.name] = Watched(watches[running.name], self.formulas, self.observations, start)
             else:
                 self.observed[running.name] = Observed(running, self.formulas, start, 1 if start else 0)
 
@@ -161,6 +167,24 @@ class _Walk:
                     self._event(event, moment.events[: number + 1])
                 except Unreadable as trouble:
                     self.faults.append(trouble.fault)
+            if moment.day.time <= 0.0:
+                self._note_state(moment.day)
+
+    def _note_state(self, day: Day) -> None:
+        """The running values that are known after a day of the past."""
+        asker = self.dated.contract.payoff.place
+        for running in self.dated.contract.payoff.running:
+            try:
+                state = self.observed.get(running.name)
+                values = state.known(day) if isinstance(state, Watched) else self._running(
+                    Name(running.name, asker, Kind.NUMBER), day, self.settable)
+            except Unreadable:
+                continue  # not begun yet
+            numbers = [self.formulas.fixed(value) for value in values]
+            if numbers and None not in numbers:
+                self.state.running[running.name] = tuple(numbers)
+            else:
+                self.state.running.pop(running.name, None)
 
     def notes(self, makeup: Makeup) -> tuple[WatchNote, ...]:
         names = self.dated.contract.assets
@@ -188,7 +212,9 @@ class _Walk:
         state = self.observed[running.name]
         try:
             scene = self._scene(running, update.occasion, running.formula)
-            state.update(self.formulas.read(running.formula, scene))
+            values = self.formulas.read(running.formula, scene)
+            flag = running.formula.kind.is_flag
+            state.update(tuple(self._settled(value, update.occasion.day) for value in values) if flag else values)
         except Unreadable as trouble:  # a fault only where somebody reads it
             state.trouble = trouble
 
@@ -196,10 +222,15 @@ class _Walk:
         event, occasion = dated.event, dated.occasion
         parts = _formulas_of((*event.then, *event.otherwise))
         scene = self._scene(event, occasion, event.condition, *parts)
-        condition = self.formulas.one(event.condition, scene) if event.condition else self.builder.constant(1.0)
+        condition = self.builder.constant(1.0)
+        if event.condition:
+            condition = self._settled(self.formulas.one(event.condition, scene), occasion.day)
         happens = self.builder.emit(Op.AND, self.alive, condition, place=event.place)
         if event.name:
             self.ledger.happened(event.name, occasion.day, happens)
+        if occasion.day.time <= 0.0 and self.builder.number(self.alive) != 0.0:
+            held = self.builder.number(happens)
+            self.state.events.append(PastEvent(event, occasion.day, None if held is None else bool(held)))
         does = self._branch(event.then, dated, happens, scene)
         if event.otherwise:
             opposite = self.builder.emit(Op.NOT, condition, place=event.place)
@@ -224,7 +255,7 @@ class _Walk:
             match action:
                 case Pay():
                     due = dated.due[action]
-                    self._pay(action, self.formulas.one(action.amount, scene), due, flag)
+                    self._pay(action, self.formulas.one(action.amount, scene), day, due, flag)
                     branch.due.append(due.time)
                 case Assign(values=pairs):
                     branch.values.update({name: self.formulas.read(value, scene) for name, value in pairs})
@@ -233,12 +264,22 @@ class _Walk:
                     break
         return branch
 
-    def _pay(self, pay: Pay, amount: int, due: Day, flag: int) -> None:
+    def _settled(self, flag: int, day: Day) -> int:
+        """A flag of the past as what fixings and terms make of it, so that what hangs on it folds."""
+        known = self.formulas.fixed(flag) if day.time <= 0.0 else None
+        return flag if known is None else self.builder.constant(known)
+
+    def _pay(self, pay: Pay, amount: int, day: Day, due: Day, flag: int) -> None:
         emit = self.builder.emit
+        fixed = self.formulas.fixed(amount) if day.time <= 0.0 and self.builder.number(flag) == 1.0 else None
+        if fixed is not None:
+            self.state.payments.append(Settled(pay, day, due, fixed))
+        if due.time < 0.0:  # paid already
+            return
         discount = self.builder.leaf(Leaf(LeafKind.DISCOUNT, end=due.time))
         present = emit(Op.MUL, amount, discount, place=pay.place)
         paid = emit(Op.SELECT, flag, present, self.builder.constant(0.0), place=pay.place)
-        self.ledger.pay(pay, paid, due)
+        self.ledger.pay(pay, paid, due, owed=fixed is not None)
 
     def _merge(self, condition: int, yes: dict[str, Values], no: dict[str, Values]) -> None:
         for name, value in yes.items():
@@ -254,16 +295,18 @@ class _Walk:
         emit = self.builder.emit
         ends = emit(Op.AND, self.alive, flag, place=event.place)
         self.ledger.ended(day, ends, max(due or of_the_day or [day.time]))
+        if day.time <= 0.0 and self.builder.number(ends) == 1.0:
+            self.state.ended = day
         self.alive = emit(Op.AND, self.alive, emit(Op.NOT, flag), place=event.place)
 
     def _scene(self, owner: Running | Event, occasion: Occasion, *formulas: Formula | None) -> Scene:
         """The names on a date, for the formulas of a running value or event. What each `previous` in them must
         remember for the next date is taken now, before any action."""
         day = occasion.day
-        if day.time < 0.0:
+        if day.time < 0.0 and day.date is None:
             raise Unreadable(owner.place, f"observed on {day}, before the valuation date")
         scene = Scene(
-            spot=lambda _: self._spot(day),
+            spot=lambda _: self.observations.all(day),
             running=lambda name: self._running(name, day, self.settable),
             occasion=occasion,
             remembered=self.memory.get(owner.place),
@@ -283,16 +326,11 @@ class _Walk:
                 continue  # it stands in a branch that this contract does not take
         return kept
 
-    def _spot(self, day: Day) -> Values:
-        return tuple(
-            self.builder.input(Op.LEVEL, LevelKey(asset, day.time)) for asset in range(len(self.dated.contract.assets))
-        )
-
     def _running(self, name: Name, day: Day, values: dict[str, Values]) -> Values:
         if name.name in values:
             return values[name.name]
         state = self.observed[name.name]
-        return state.read(name, day.time) if isinstance(state, Watched) else state.read(name)
+        return state.read(name, day) if isinstance(state, Watched) else state.read(name)
 
 
 def _formulas_of(actions: Iterable[Action]) -> list[Formula]:

@@ -1,0 +1,48 @@
+"""What the past has settled, gathered while the tape is built: events, payments, running values, an end."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+from mcx.checked.payoff import Event, Pay
+from mcx.dates.dated_contract import Day
+
+
+@dataclass(frozen=True, slots=True)
+class PastEvent:
+    """An event up to the valuation date, and whether its condition held (None: not settled by what is fixed)."""
+
+    event: Event
+    day: Day
+    held: bool | None
+
+
+@dataclass(frozen=True, slots=True)
+class Settled:
+    """An amount that is fixed, in the unit of the price: observed on `day`, paid on `due`. It is owed where `due` is the
+    valuation date or later."""
+
+    pay: Pay
+    day: Day
+    due: Day
+    amount: float
+
+    @property
+    def owed(self) -> bool:
+        return self.due.time >= 0.0
+
+
+@dataclass(slots=True)
+class State:
+    """The state of a contract on the valuation date. `running` holds values that are known, one or one for each
+    asset; `ended` the day on which it ended, None where it has not."""
+
+    events: list[PastEvent] = field(default_factory=list)
+    payments: list[Settled] = field(default_factory=list)
+    running: dict[str, tuple[float, ...]] = field(default_factory=dict)
+    ended: Day | None = None
+
+    @property
+    def seasoned(self) -> bool:
+        """Whether anything has happened yet."""
+        return bool(self.events or self.running)
