@@ -15,8 +15,7 @@ from typing import TYPE_CHECKING
 
 from mcx.checked.load import Request, checked_request
 from mcx.dates.dated_contract import DatedContract
-from mcx.dates.dating import date_contract
-from mcx.dates.history import history_of
+from mcx.dates.dating import date_on
 from mcx.faults import Fault, InputError, Place, Refusal, RequestError, did_you_mean
 from mcx.text.documents import read_documents
 from mcx.text.located import Document
@@ -27,7 +26,7 @@ if TYPE_CHECKING:
     from mcx.estimators.plan import Precision
     from mcx.estimators.price import Ready
     from mcx.report.greek_results import GreeksResult, GreeksTable
-    from mcx.report.results import Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay
+    from mcx.report.results import CalendarView, Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay
 
 File = str | Path
 Progress = Callable[[int, int, float], None]  # paths done, paths planned, standard error so far (unit of the price)
@@ -130,21 +129,29 @@ def greeks(
     return table.contracts[0] if len(made.contracts) == 1 else table
 
 
-def readback(*files: File, path: File | None = None) -> Readback | ReadbackTable:
-    """What every contract in the files says, in sentences and dates; with a market also what that says on the dates.
+def readback(*files: File, path: File | None = None, calendar: bool = False) -> Readback | ReadbackTable | CalendarView:
+    """What every contract in the files says, in sentences and dates; with a market also what that says on the dates,
+    and what has become of the contract by its valuation date.
 
     `path` names a file of levels (YAML by asset and date, or CSV) that is run through the one contract in the files.
+    `calendar` gives in place of all that one list of the fixings, decisions and payments to come of all contracts.
     Raises InputError, RequestError.
     """
     from mcx.report.readback import readback as read_back
     from mcx.report.results import ReadbackTable
 
     made, dated = _dated(files, with_market=False)
+    if path is not None and calendar:
+        raise RequestError("levels are run through one contract; a calendar lists what comes next of all")
     if path is not None and len(dated) > 1:
         raise RequestError(f"levels can be run through one contract at a time; the files hold {len(dated)}")
     if made.market is not None:
         _check_dividends(made.market, dated)
     given = None if path is None else _on_levels(dated[0], path)
+    if path is None and made.market is not None:
+        _check_fixings(dated)
+    if calendar:
+        return _calendar(made, dated)
     found = tuple(read_back(each, made.market, given) for each in dated)
     return found[0] if len(found) == 1 else ReadbackTable(found)
 
@@ -239,9 +246,8 @@ def _all_dated(made: Request, faults: Iterable[Fault]) -> list[DatedContract]:
     """Every contract of a request with its dates; raises InputError with all faults."""
     faults, dated = list(faults), []
     for contract in made.contracts:
-        history, wrong = history_of(contract, made.market)
-        found, late = date_contract(contract, made.market.valuation if made.market else None, history)
-        faults += [*wrong, *late]
+        found, wrong = date_on(contract, made.market)
+        faults += wrong
         if found is not None:
             dated.append(found)
     if faults:
@@ -258,6 +264,24 @@ def _refused(dated: Iterable[DatedContract]) -> list[Fault]:
     from mcx.tape.unroll import unroll
 
     return [fault for each in watched for fault in unroll(each, nodes=()).faults]
+
+
+def _check_fixings(dated: Iterable[DatedContract]) -> None:
+    """Raises InputError with every fixing that is missing. What else the tape refuses, the readback says."""
+    from mcx.tape.unroll import unroll
+
+    faults = [fault for each in dated if each.moments[0].day.time < 0.0 for fault in unroll(each, nodes=()).faults]
+    if faults:
+        raise InputError(faults)
+
+
+def _calendar(made: Request, dated: Sequence[DatedContract]) -> CalendarView:
+    """What comes next of every contract; what is known of the past needs a market."""
+    from mcx.report.calendar import calendar
+    from mcx.tape.unroll import unroll
+
+    states = [unroll(each, nodes=()).state if made.market else None for each in dated]
+    return calendar(zip(dated, states, strict=True))
 
 
 def _check_dividends(market: Market, dated: Iterable[DatedContract]) -> None:

@@ -12,12 +12,13 @@ import math
 from dataclasses import replace
 
 from mcx.checked.contract import Contract, DayRef, Figures, Stretch, place_of
+from mcx.checked.market import Market
 from mcx.checked.payoff import At, Continuous, Event, Pay, Payoff, Running
 from mcx.checked.term_values import DATED_TYPES, NUMERIC
 from mcx.dates.business_days import NotCovered, good_days
 from mcx.dates.dated_contract import Day, DatedContract, DatedEvent, Moment, Occasion, Update, Watch
 from mcx.dates.day_counts import ICMA, actual_365_fixed, year_fraction
-from mcx.dates.history import NO_HISTORY, History, said
+from mcx.dates.history import NO_HISTORY, History, history_of, said
 from mcx.dates.readable import readings
 from mcx.dates.rules import TermDays, part_of
 from mcx.faults import Fault, Place
@@ -49,6 +50,13 @@ def date_contract(
     dated, faults = _Dating(contract, valuation, schedules, unread, start, terms, history).dated()
     faults += terms.faults + _wrong_lengths(contract, schedules)
     return (None if faults or contract.at_fault else dated), sorted(set(faults))
+
+
+def date_on(contract: Contract, market: Market | None) -> tuple[DatedContract | None, list[Fault]]:
+    """The contract with every date, seen from the market's valuation date and with the past that the market knows."""
+    history, wrong = history_of(contract, market)
+    dated, faults = date_contract(contract, market.valuation if market else None, history)
+    return (None if wrong else dated), [*wrong, *faults]
 
 
 def _payment_terms(payoff: Payoff) -> frozenset[str]:

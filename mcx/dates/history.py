@@ -90,7 +90,7 @@ def history_of(contract: Contract, market: Market | None) -> tuple[History, list
                 levels[number, date] = known.value
     scale = tuple(_factor(contract, asset, today) for asset in contract.assets)
     return History(levels, moved, scale if set(scale) != {1.0} else (), tuple(names), contract.happened,
-                   market.fixings, today, market.fixings_place), faults
+                   market.fixings, today, place=market.fixings_place), faults
 
 
 def _factor(contract: Contract, asset: str, date: datetime.date) -> float:

@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 
 from mcx.checked.payoff import Event, Pay
-from mcx.dates.dated_contract import Day
+from mcx.dates.dated_contract import Day, Occasion
 
 
 @dataclass(frozen=True, slots=True)
@@ -32,6 +32,16 @@ class Settled:
         return self.due.time >= 0.0
 
 
+@dataclass(frozen=True, slots=True)
+class Accruing:
+    """A coupon of the running period that is paid whatever happens; `since` is where its period begins."""
+
+    pay: Pay
+    occasion: Occasion
+    since: Day
+    amount: float
+
+
 @dataclass(slots=True)
 class State:
     """The state of a contract on the valuation date. `running` holds values that are known, one or one for each
@@ -39,6 +49,7 @@ class State:
 
     events: list[PastEvent] = field(default_factory=list)
     payments: list[Settled] = field(default_factory=list)
+    accruing: list[Accruing] = field(default_factory=list)
     running: dict[str, tuple[float, ...]] = field(default_factory=dict)
     ended: Day | None = None
 

@@ -23,7 +23,7 @@ from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Instruction, Leaf, LeafKind, LevelKey, Output, Tape
 from mcx.tape.running import Observed, Watched
-from mcx.tape.state import PastEvent, Settled, State
+from mcx.tape.state import Accruing, PastEvent, Settled, State
 from mcx.tape.steps import PLAIN, Grid, Makeup, expand_levels
 from mcx.tape.watching import conflicts
 
@@ -255,7 +255,9 @@ class _Walk:
             match action:
                 case Pay():
                     due = dated.due[action]
-                    self._pay(action, self.formulas.one(action.amount, scene), day, due, flag)
+                    amount = self.formulas.one(action.amount, scene)
+                    self._pay(action, amount, day, due, flag)
+                    self._accrue(action, dated.occasion, amount, flag)
                     branch.due.append(due.time)
                 case Assign(values=pairs):
                     branch.values.update({name: self.formulas.read(value, scene) for name, value in pairs})
@@ -268,6 +270,16 @@ class _Walk:
         """A flag of the past as what fixings and terms make of it, so that what hangs on it folds."""
         known = self.formulas.fixed(flag) if day.time <= 0.0 else None
         return flag if known is None else self.builder.constant(known)
+
+    def _accrue(self, pay: Pay, occasion: Occasion, amount: int, flag: int) -> None:
+        """Note a coupon that is certain and whose period runs on the valuation date."""
+        if pay.part != "coupon" or occasion.day.date is None or occasion.day.time <= 0.0:
+            return
+        listed = self.dated.schedules.get(occasion.schedule, ())
+        since = listed[occasion.nth - 2] if occasion.nth > 1 else self.dated.start
+        fixed = self.formulas.fixed(amount) if self.builder.number(flag) == 1.0 and since.time <= 0.0 else None
+        if fixed is not None:
+            self.state.accruing.append(Accruing(pay, occasion, since, fixed))
 
     def _pay(self, pay: Pay, amount: int, day: Day, due: Day, flag: int) -> None:
         emit = self.builder.emit
