@@ -81,7 +81,17 @@ class Word:
     place: Place
 
 
-TermValue: TypeAlias = DayRef | DayRule | DayList | Stretch | Figures | Word
+@dataclass(frozen=True, slots=True)
+class LevelFixing:
+    """The value of a `level` term that is observed rather than stated, for each asset: its level on a date (`how` is
+    'fixing'), or the 'average', 'lowest' or 'highest' of its levels on several."""
+
+    how: str
+    dates: DayRef | DayList | DayRule
+    place: Place
+
+
+TermValue: TypeAlias = DayRef | DayRule | DayList | Stretch | Figures | Word | LevelFixing
 
 
 def place_of(value: TermValue, position: int) -> Place:

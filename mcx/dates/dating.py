@@ -11,7 +11,7 @@ import datetime
 import math
 from dataclasses import replace
 
-from mcx.checked.contract import Contract, DayRef, Figures, Stretch, place_of
+from mcx.checked.contract import Contract, DayRef, Figures, LevelFixing, Stretch, place_of
 from mcx.checked.market import Market
 from mcx.checked.payoff import At, Continuous, Event, Pay, Payoff, Running
 from mcx.checked.term_values import DATED_TYPES, NUMERIC
@@ -42,7 +42,8 @@ def date_contract(
         return None, faults
     base = None if contract.textbook else valuation or contract.start.date
     terms = TermDays(contract, base, good, paying, _payment_terms(contract.payoff))
-    dated_terms = [term.name for term in contract.payoff.terms if term.type in DATED_TYPES]
+    dated_terms = [term.name for term in contract.payoff.terms if term.type in DATED_TYPES
+                   or isinstance(contract.terms.get(term.name), LevelFixing)]
     found = {name: terms.of_term(name) for name in dated_terms if name in contract.terms}
     schedules = {name: days for name, days in found.items() if days}
     unread = frozenset(name for name in dated_terms if name in contract.at_fault or found.get(name) == ())
@@ -92,7 +93,7 @@ def _positions(contract: Contract, schedules: dict[str, tuple[Day, ...]]) -> dic
     """The terms of several dates that have a day among their dates, and where."""
     found: dict[Day, dict[str, int]] = {}
     for name, days in schedules.items():
-        if not isinstance(contract.terms[name], DayRef | Stretch):
+        if not isinstance(contract.terms[name], DayRef | Stretch | LevelFixing):
             for k, day in enumerate(days):
                 found.setdefault(day, {})[name] = k
     return found

@@ -12,6 +12,7 @@ from dataclasses import replace
 
 from mcx.checked.formula import Binary, Call, Formula, IfElse, Name, OfAsset, Unary, walk
 from mcx.dates.dated_contract import DatedContract, Occasion
+from mcx.faults import Place
 from mcx.leaves.market_map import MarketMap
 from mcx.report.events import event_label
 from mcx.report.results import Distance
@@ -108,7 +109,13 @@ def _gaps(
 ) -> list[float] | None:
     """Left side less right side for each asset; None where that is not known."""
     builder = Builder()
-    formulas = Formulas(dated.contract, builder)
+
+    def observed(name: str, place: Place, _: Occasion | None) -> tuple[int, ...]:
+        if name not in state.terms:
+            raise Unreadable(place, "not fixed yet")
+        return tuple(builder.constant(value) for value in state.terms[name])
+
+    formulas = Formulas(dated.contract, builder, observed)
 
     def running(name: Name) -> tuple[int, ...]:
         if name.name not in state.running:

@@ -304,7 +304,7 @@ class PastLine(Result):
 
 @dataclass(frozen=True, slots=True)
 class Distance(Result):
-    """How far today's level of an asset is from one at which a comparison turns: `level` in the asset's own terms,
+    """How far today's level of an asset is from one at which a comparison turns: `level` and `today` as they count,
     `distance` as a part of today's level (-0.25: it must fall by a quarter). `date` is the next on which it is read."""
 
     what: str

@@ -60,13 +60,14 @@ def state_view(dated: DatedContract, state: State, market: MarketMap) -> StateVi
     paid = [each for each in state.payments if not each.owed and each.amount]
     return StateView(
         valuation=str(Day(0.0, dated.valuation)),
-        fixings=tuple(_fixings(dated)),
+        fixings=tuple(_fixings(dated, state)),
         past=tuple(PastLine(str(each.day), event_label(each.event, contract.payoff), _held(each.held))
                    for each in state.events if each.event.condition is not None or each.event.name),
         paid=tuple(Payment(str(each.due), each.pay.leg, each.amount, each.amount * contract.size) for each in paid),
         owed=owed_amounts(dated, state, market),
         accrued=accrued(dated, state),
-        running=tuple(Sentence(name, _values(dated, name, values)) for name, values in state.running.items()),
+        running=tuple(Sentence(name, _values(dated, name, values))
+                      for name, values in (state.terms | state.running).items()),
         ended=str(state.ended or ""),
         next=tuple(_next(dated, state)),
         distances=tuple(distances(dated, state, market)),
@@ -77,20 +78,16 @@ def _held(held: bool | None) -> str:
     return "by today's level" if held is None else "yes" if held else "no"
 
 
-def _fixings(dated: DatedContract) -> Iterator[Fixed]:
-    """The levels of the past dates, as they count."""
-    for moment in dated.moments:
-        if moment.day.time <= 0.0:
-            for number, asset in enumerate(dated.contract.assets):
-                level = dated.history.level(number, dated.history.observed(number, moment.day))
-                if level is not None:
-                    yield Fixed(str(moment.day), asset, level)
+def _fixings(dated: DatedContract, state: State) -> Iterator[Fixed]:
+    """The levels of the past that were read, as they count."""
+    for (day, number), level in sorted(state.fixings.items(), key=lambda item: (item[0][0].time, item[0][1])):
+        yield Fixed(str(day), dated.contract.assets[number], level)
 
 
 def _values(dated: DatedContract, name: str, values: tuple[float, ...]) -> str:
-    """A running value's numbers; flags in words."""
-    running = next(each for each in dated.contract.payoff.running if each.name == name)
-    formula = running.start if running.how == "set" else running.formula
+    """The numbers of a running value or an observed level; flags in words."""
+    running = next((each for each in dated.contract.payoff.running if each.name == name), None)
+    formula = running and (running.start if running.how == "set" else running.formula)
     flag = formula is not None and formula.kind.is_flag and running.how != "total"
     shown = [("yes" if value else "no") if flag else figure(value) for value in values]
     return shown[0] if len(shown) == 1 else ", ".join(

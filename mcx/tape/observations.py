@@ -24,13 +24,15 @@ class Observations:
     def __init__(self, dated: DatedContract, builder: Builder):
         self.history, self.builder, self.title = dated.history, builder, dated.contract.title
         self.assets = dated.contract.assets
+        self.used: dict[tuple[Day, int], float] = {}  # fixings, by the day they are read for
         self.asked: dict[LevelKey, datetime.date] = {}  # the past levels that no fixing gives
 
     def level(self, asset: int, day: Day) -> int:
         """The level of an asset on a day, as it counts in the contract."""
-        day = self.history.observed(asset, day)
+        asked, day = day, self.history.observed(asset, day)
         known = self.history.level(asset, day)
         if known is not None:
+            self.used[asked, asset] = known
             return self.builder.constant(known)
         key = LevelKey(asset, day.time)
         if day.time < 0.0:

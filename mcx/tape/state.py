@@ -45,13 +45,16 @@ class Accruing:
 @dataclass(slots=True)
 class State:
     """The state of a contract on the valuation date. `running` holds values that are known, one or one for each
-    asset; `ended` the day on which it ended, None where it has not."""
+    asset, `terms` level terms that were observed, `fixings` the levels that were read, by day and asset, as they count;
+    `ended` the day on which it ended, None where it has not."""
 
     events: list[PastEvent] = field(default_factory=list)
     payments: list[Settled] = field(default_factory=list)
     accruing: list[Accruing] = field(default_factory=list)
     running: dict[str, tuple[float, ...]] = field(default_factory=dict)
     ended: Day | None = None
+    terms: dict[str, tuple[float, ...]] = field(default_factory=dict)
+    fixings: dict[tuple[Day, int], float] = field(default_factory=dict)
 
     @property
     def seasoned(self) -> bool:

@@ -22,7 +22,7 @@ from mcx.tape.observations import Observations
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Instruction, Leaf, LeafKind, LevelKey, Output, Tape
-from mcx.tape.running import Observed, Watched
+from mcx.tape.running import FOLDS, Observed, Watched
 from mcx.tape.state import Accruing, PastEvent, Settled, State
 from mcx.tape.steps import PLAIN, Grid, Makeup, expand_levels
 from mcx.tape.watching import conflicts
@@ -136,8 +136,8 @@ class _Walk:
         payoff = dated.contract.payoff
         self.builder = Builder()
         self.observations = Observations(dated, self.builder)
-        self.state = State()
-        self.formulas = Formulas(dated.contract, self.builder)
+        self.state = State(fixings=self.observations.used)
+        self.formulas = Formulas(dated.contract, self.builder, self._observed_level)
         self.ledger = Ledger.opened(self.builder, payoff)
         self.alive = self.builder.constant(1.0)
         self.faults: list[Fault] = []
@@ -206,6 +206,24 @@ class _Walk:
         except Unreadable as trouble:
             self.faults.append(trouble.fault)
             return (self.builder.constant(0.0),)
+
+    def _observed_level(self, name: str, place: Place, occasion: Occasion | None) -> Values:
+        """A level term that is observed: the fixing on its date, or the average, lowest or highest of several."""
+        days = self.dated.schedules[name]
+        levels = [self.observations.all(day) for day in days]
+        how = self.dated.contract.terms[name].how
+        first, *rest = levels
+        for values in rest:
+            first = self.formulas.spread(FOLDS.get(how, Op.ADD), first, values)
+        if how == "average":
+            first = self.formulas.spread(Op.DIV, first, (self.builder.constant(len(days)),))
+        known = [self.builder.number(value) for value in first]
+        if None not in known:
+            self.state.terms[name] = tuple(known)
+        if occasion.day.time < days[-1].time if occasion else None in known:
+            when = f"read on {occasion.day}" if occasion else "read before"
+            raise Unreadable(place, f"'{name}' is fixed on {days[-1]} only and {when}")
+        return first
 
     def _update(self, update: Update) -> None:
         running = update.running
