@@ -258,7 +258,7 @@ def _all_dated(made: Request, faults: Iterable[Fault]) -> list[DatedContract]:
 def _refused(dated: Iterable[DatedContract]) -> list[Fault]:
     """Continuous watches that cannot be simulated and fixings that are missing, so that they are told beside the faults
     of the documents."""
-    watched = [each for each in dated if each.watches or each.moments[0].day.time < 0.0]
+    watched = [each for each in dated if each.watches or each.begun]
     if not watched:
         return []
     from mcx.tape.unroll import unroll
@@ -270,7 +270,7 @@ def _check_fixings(dated: Iterable[DatedContract]) -> None:
     """Raises InputError with every fixing that is missing. What else the tape refuses, the readback says."""
     from mcx.tape.unroll import unroll
 
-    faults = [fault for each in dated if each.moments[0].day.time < 0.0 for fault in unroll(each, nodes=()).faults]
+    faults = [fault for each in dated if each.begun for fault in unroll(each, nodes=()).faults]
     if faults:
         raise InputError(faults)
 

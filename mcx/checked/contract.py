@@ -143,6 +143,7 @@ class Contract:
     place: Place  # of the title
     notional: float | None = None
     units: float | None = None
+    denomination: float | None = None  # of one note, where shares are delivered: only whole shares of it are
     start: DayRef | None = None
     day_count: str = ""
     settlement: Period | None = None
@@ -158,6 +159,11 @@ class Contract:
     at_fault: frozenset[str] = frozenset()
     framed: bool = True
     terms_place: Place | None = None  # where a term that is missing would stand
+
+    @property
+    def lot(self) -> float:
+        """What one note is of the notional, or one unit."""
+        return self.denomination or 1.0
 
     @property
     def size(self) -> float:

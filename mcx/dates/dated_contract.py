@@ -10,7 +10,7 @@ import datetime
 from dataclasses import dataclass
 
 from mcx.checked.contract import Contract
-from mcx.checked.payoff import Event, Pay, Running
+from mcx.checked.payoff import Deliver, Event, Pay, Running
 from mcx.dates.day import Day
 from mcx.dates.history import NO_HISTORY, History
 
@@ -94,7 +94,14 @@ class DatedContract:
     history: History = NO_HISTORY
 
     @property
+    def begun(self) -> bool:
+        """Whether some of its days lie before the valuation date."""
+        return any(days and days[0].time < 0.0 for days in self.schedules.values())
+
+    @property
     def last(self) -> Day:
         """The last day on which anything is observed."""
         days = [moment.day for moment in self.moments] + [watch.end for watch in self.watches]
+        days += [due for moment in self.moments for event in moment.events for pay, due in event.due.items()
+                 if isinstance(pay, Deliver)]
         return max(days, key=lambda day: day.time)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 
-from mcx.checked.payoff import Event, Pay
+from mcx.checked.payoff import Deliver, Event, Pay
 from mcx.dates.dated_contract import Day, Occasion
 
 
@@ -33,6 +33,18 @@ class Settled:
 
 
 @dataclass(frozen=True, slots=True)
+class Delivery:
+    """Shares of an asset that are certain: how many whole ones for each note, and the fraction that is paid in cash."""
+
+    pay: Deliver
+    asset: int
+    day: Day
+    due: Day
+    whole: float
+    fraction: float
+
+
+@dataclass(frozen=True, slots=True)
 class Accruing:
     """A coupon of the running period that is paid whatever happens; `since` is where its period begins."""
 
@@ -50,6 +62,7 @@ class State:
 
     events: list[PastEvent] = field(default_factory=list)
     payments: list[Settled] = field(default_factory=list)
+    deliveries: list[Delivery] = field(default_factory=list)
     accruing: list[Accruing] = field(default_factory=list)
     running: dict[str, tuple[float, ...]] = field(default_factory=dict)
     ended: Day | None = None

@@ -7,12 +7,13 @@ Running values need no care after the contract has ended, because nothing is pai
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field
 
 from mcx.checked.formula import Formula, Name, Previous
 from mcx.checked.kinds import Kind
-from mcx.checked.payoff import Action, Assign, End, Event, Pay, Running
+from mcx.checked.payoff import Action, Assign, Deliver, End, Event, Pay, Running
 from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Occasion, Update
 from mcx.faults import Fault, Place
 from mcx.tape.builder import Builder
@@ -23,7 +24,7 @@ from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Instruction, Leaf, LeafKind, LevelKey, Output, Tape
 from mcx.tape.running import FOLDS, Observed, Watched
-from mcx.tape.state import Accruing, PastEvent, Settled, State
+from mcx.tape.state import Accruing, Delivery, PastEvent, Settled, State
 from mcx.tape.steps import PLAIN, Grid, Makeup, expand_levels
 from mcx.tape.watching import conflicts
 
@@ -271,6 +272,9 @@ class _Walk:
                       scene.remembered)
         for action in actions:
             match action:
+                case Deliver():
+                    self._deliver(action, dated.occasion.day, dated.due[action], flag, scene)
+                    branch.due.append(dated.due[action].time)
                 case Pay():
                     due = dated.due[action]
                     amount = self.formulas.one(action.amount, scene)
@@ -298,6 +302,37 @@ class _Walk:
         fixed = self.formulas.fixed(amount) if self.builder.number(flag) == 1.0 and since.time <= 0.0 else None
         if fixed is not None:
             self.state.accruing.append(Accruing(pay, occasion, since, fixed))
+
+    def _deliver(self, action: Deliver, day: Day, due: Day, flag: int, scene: Scene) -> None:
+        """Shares are worth their level on the delivery date. Of each note whole ones are delivered and the fraction is
+        paid in cash, at the level of the day on which it was decided, as far as their number is fixed."""
+        emit, constant, contract = self.builder.emit, self.builder.constant, self.dated.contract
+        assets = range(len(contract.assets))
+        shares = self.formulas.read(action.amount, scene)
+        chosen = self.formulas.read(action.which, scene) if action.which is not None else (constant(1.0),)
+        shares, chosen = (values if len(values) > 1 else values * len(assets) for values in (shares, chosen))
+        worth = []
+        for asset in assets:
+            if contract.conversion.get(contract.assets[asset]) == "quanto":
+                raise Unreadable(action.place, f"'{contract.assets[asset]}' is delivered: a share is worth its level at "
+                                               "the rate of exchange of the day, which 'quanto' denies")
+            taken = self._settled(chosen[asset], day)
+            number = self.formulas.fixed(shares[asset])
+            if number is not None:
+                whole = math.floor(number * contract.lot * (1.0 + 1e-12)) / contract.lot
+                if day.time <= 0.0 and self.builder.number(flag) == self.builder.number(taken) == 1.0:
+                    self.state.deliveries.append(Delivery(action, asset, day, due, whole * contract.lot,
+                                                          (number - whole) * contract.lot))
+            if due.time < 0.0:
+                continue
+            if number is None:
+                value = emit(Op.MUL, shares[asset], self.observations.level(asset, due), place=action.place)
+            else:
+                value = emit(Op.ADD, emit(Op.MUL, constant(whole), self.observations.level(asset, due)),
+                             emit(Op.MUL, constant(number - whole), self.observations.level(asset, day)))
+            worth.append(emit(Op.SELECT, taken, value, constant(0.0), place=action.place))
+        if worth:
+            self._pay(action, self.builder.fold(Op.ADD, worth, action.place), day, due, flag)
 
     def _pay(self, pay: Pay, amount: int, day: Day, due: Day, flag: int) -> None:
         emit = self.builder.emit
@@ -368,6 +403,7 @@ def _formulas_of(actions: Iterable[Action]) -> list[Formula]:
     for action in actions:
         if isinstance(action, Pay):
             found.append(action.amount)
+            found += [action.which] if isinstance(action, Deliver) and action.which is not None else []
         elif isinstance(action, Assign):
             found += [value for _, value in action.values]
     return found
