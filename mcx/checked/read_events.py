@@ -62,8 +62,8 @@ class EventReader:
                     faults.append(Fault(node.key(key).place, f"'{key}' needs an 'if' in the same event"))
             if "then" not in node and "else" not in node:
                 if not any(key in ACTIONS for key in bare):
-                    faults.append(Fault(node.place, "nothing happens at this event: expected 'pay', 'set', 'end', or "
-                                                    "'if' and 'then'"))
+                    faults.append(Fault(node.place, "nothing happens at this event: expected 'pay', 'deliver', 'set', "
+                                                    "'end', or 'if' and 'then'"))
                     return None, (), ()
                 action = self._action_of(node)
                 return None, (action,) if action else (), ()
