@@ -22,7 +22,7 @@ from mcx.estimators.ladder import Point, Step, grid, ladder
 from mcx.estimators.methods import PATHWISE, Method, methods
 from mcx.estimators.plan import Plan, Precision, plan
 from mcx.estimators.price import Ready
-from mcx.estimators.revalue import Revaluer, central_differences, impossible, second_differences, step_of
+from mcx.estimators.revalue import IN_PROPORTION, Revaluer, central_differences, impossible, second_differences, step_of
 from mcx.estimators.sensitivities import Curvature, Sensitivity, first_order, second_order
 from mcx.estimators.theta import between, theta
 from mcx.leaves.jacobian import Input, inputs, without_derivative
@@ -287,4 +287,4 @@ def _times(burden: float, best: float) -> str:
 
 def _bumped(number: Input, size: float) -> str:
     step = step_of(number, size)
-    return f"moved by ±{100 * size:.3g} %" if number.kind in ("spot", "forward") else f"moved by ±{step:g}"
+    return f"moved by ±{100 * size:.3g} %" if number.kind in IN_PROPORTION else f"moved by ±{step:g}"

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
-from mcx.checked.contract import Contract
+from mcx.checked.conversions import simulated_rates
 from mcx.checked.market import Market
 from mcx.estimators.differentiate import Differentiator, without_first_levels
 from mcx.estimators.price import Ready
@@ -21,6 +21,7 @@ PATHWISE, LIKELIHOOD, MIXED = "pathwise", "likelihood ratio", "mixed"
 GAMMAS = {PATHWISE: "likelihood ratio of the pathwise delta", LIKELIHOOD: "second-order likelihood ratio",
           MIXED: "mixed: likelihood ratio of the pathwise delta, second-order where payments jump"}
 ESCROWS = (LeafKind.ESCROW, LeafKind.MEAN_ESCROW)
+ESCROWED_BY = ("rate", "yield", "forward", "dividend", "dividend share", "decrement points")  # what the escrow hangs on
 COMPARED = (Op.LT, Op.LE, Op.EQ, Op.NE)
 SINGULAR = 1e-14  # an own variance below this share of the whole
 MOST_DRAWS = 64  # where every payment is smooth; the variance of a likelihood ratio grows with the steps
@@ -68,17 +69,18 @@ def methods(ready: Ready, market: Market, asked: str) -> Methods:
     jumping = [payment for payment in paid if found[payment]]
     smooth = [payment for payment in paid if not found[payment]]
     places = tuple({(jump.kind, jump.place): jump for payment in jumping for jump in found[payment]}.values())
-    still = without_own_randomness(dict(zip(tape.leaves, values, strict=True)), contract)
+    simulated = (*contract.assets, *simulated_rates(contract.conversion, contract.currency, market))
+    still = without_own_randomness(dict(zip(tape.leaves, values, strict=True)), simulated)
 
     def method(name: str, pathwise: list[int], likelihood: list[int]) -> Method:
         engine = Differentiator.of(tape, unrolled.grid, contract, known, pathwise=pathwise, likelihood=likelihood,
                                    second=not still)
         refusals = {}
         if likelihood and (reason := read_today(tape, known)):
-            refusals["spot"] = reason
+            refusals |= {"spot": reason, "fx spot": reason}
         if likelihood and (reason := dividends_compared(tape, known)):
             blended = any(market.assets[name].blend for name in contract.assets)
-            refusals |= {kind: reason for kind in ("rate", "yield", *(("spot",) if blended else ()))}
+            refusals |= {kind: reason for kind in (*ESCROWED_BY, *(("spot",) if blended else ()))}
         if reason := still or second_order_trouble(tape, engine):
             refusals["gamma"] = reason
         return Method(name, engine, refusals)
@@ -102,8 +104,9 @@ def methods(ready: Ready, market: Market, asked: str) -> Methods:
     return Methods(tuple(valid), places, reason)
 
 
-def without_own_randomness(values: dict[Leaf, float], contract: Contract) -> str:
-    """Why the paths have no density: an asset that does not move by itself, or as good as not; '' where all do."""
+def without_own_randomness(values: dict[Leaf, float], names: Sequence[str]) -> str:
+    """Why the paths have no density: an asset or a rate of exchange (by `names`) that does not move by itself, or as good
+    as not; '' where all do."""
     variances: dict[tuple[int, float], float] = {}
     for leaf, value in values.items():
         if leaf.kind is LeafKind.FACTOR:
@@ -111,7 +114,7 @@ def without_own_randomness(values: dict[Leaf, float], contract: Contract) -> str
     for leaf, value in values.items():
         if leaf.kind is LeafKind.FACTOR and leaf.asset == leaf.other:
             if value**2 <= SINGULAR * variances[leaf.asset, leaf.end]:
-                return (f"{contract.assets[leaf.asset]} has no randomness of its own between {leaf.start:.6g}y and "
+                return (f"{names[leaf.asset]} has no randomness of its own between {leaf.start:.6g}y and "
                         f"{leaf.end:.6g}y: no vol there, or a singular correlation matrix")
     return ""
 
