@@ -263,7 +263,8 @@ def _refused(dated: Iterable[DatedContract]) -> list[Fault]:
         return []
     from mcx.tape.unroll import unroll
 
-    return [fault for each in watched for fault in unroll(each, nodes=()).faults]
+    return [fault for each in watched for fault in unroll(each, nodes=()).faults
+            if each.history.sound or fault.place != each.history.place]  # what was misspelt is not missing as well
 
 
 def _check_fixings(dated: Iterable[DatedContract]) -> None:

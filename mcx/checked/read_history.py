@@ -27,7 +27,7 @@ ByDate = dict[str, dict[datetime.date, Known]]
 
 
 def read_happened(node: Node | None, payoff: Payoff, faults: list[Fault]) -> ByDate:
-    """Values of running values as of the close of a date: 1.0 and 0.0 for flags."""
+    """Values of running values as of the close of a date: 1.0 and 0.0 for flags; nothing for one that is at fault."""
     running = {each.name: each for each in payoff.running if each.how in WATCHABLE}
     return _by_date(node, running, HAPPENED, lambda name: _value_of(running[name]), faults,
                     "a running value that can be watched all the time")
@@ -73,9 +73,11 @@ def _by_date(
             continue
         if not isinstance(dates, Mapping) or not dates.entries:
             faults.append(expected(what, dates))
+            found[name.text] = {}
             continue
         for day, value in dates.entries:
             when, known = value_of(day, date, faults), value_of(value, parse(name.text), faults)
+            found.setdefault(name.text, {})
             if when is not None and known is not None:
-                found.setdefault(name.text, {})[when] = Known(known, day.place)
+                found[name.text][when] = Known(known, day.place)
     return found

@@ -12,7 +12,7 @@ from collections.abc import Callable, Iterable
 from typing import TypeVar
 
 from mcx.checked.curves import MarketReader, correlation, valuation_of
-from mcx.checked.fixings import read_fixings
+from mcx.checked.fixings import file_of, read_fixings
 from mcx.checked.market import Curve, FxMarket, Market, Quoted
 from mcx.checked.read_underlyings import read_asset, read_fx
 from mcx.checked.reading import check_keys, mapping_of, text_of, value_of
@@ -47,13 +47,14 @@ def read_market(document: Document, table: Document | None = None) -> tuple[Mark
     _check_rates_of_exchange(fx.values(), named, faults)
     if textbook and "fixings" in body:
         faults.append(Fault(body.key("fixings").place, "fixings have dates; a textbook market has none"))
+    before = len(faults)
     fixings = read_fixings(body.get("fixings"), table, (*named.keys(), *fx), faults)
     market = Market(
         valuation=valuation, rates=rates, funding=funding, assets=assets,
         correlation=_correlations(reader, body.get("correlation"), (*named.keys(), *fx)),
         uncertainty=_uncertainty(reader, body.get("uncertainty")), place=body.get("market").place,
         source=text_of(body, "source", faults), as_of=text_of(body, "as_of", faults), keys=body.keys(),
-        fx=fx, fixings=fixings,
+        fx=fx, fixings=fixings, fixings_sound=len(faults) == before and (table is not None or not file_of(document)),
         fixings_place=Place(table.file, 1, 1) if table else (body.key("fixings") or body.get("market")).place,
     )
     return market, faults

@@ -25,7 +25,7 @@ class History:
 
     `levels` are levels as they count, of the valuation date and before; `moved` the day whose level counts for an
     observation of a disrupted day; `scale` the factor on simulated levels (empty: none has one); `names` what a level
-    needs of the market (the asset, and its rate of exchange); `place` where fixings stand or would stand.
+    needs of the market (the asset, and its rate of exchange); `sound` is whether all fixings could be read; `place` where fixings stand or would stand.
     """
 
     levels: Mapping[tuple[int, datetime.date], float] = field(default_factory=dict)
@@ -36,6 +36,7 @@ class History:
     published: Mapping[str, Mapping[datetime.date, float]] = field(default_factory=dict)
     valuation: datetime.date | None = None
     eve: datetime.date | None = None  # the good business day before the valuation date
+    sound: bool = True
     place: Place | None = None
 
     def observed(self, asset: int, day: Day) -> Day:
@@ -90,7 +91,7 @@ def history_of(contract: Contract, market: Market | None) -> tuple[History, list
                 levels[number, date] = known.value
     scale = tuple(_factor(contract, asset, today) for asset in contract.assets)
     return History(levels, moved, scale if set(scale) != {1.0} else (), tuple(names), contract.happened,
-                   market.fixings, today, place=market.fixings_place), faults
+                   market.fixings, today, sound=market.fixings_sound, place=market.fixings_place), faults
 
 
 def _factor(contract: Contract, asset: str, date: datetime.date) -> float:

@@ -77,6 +77,7 @@ def _state(state: StateView, page: Page) -> None:
             *((each.date, each.leg, "paid", f"{each.amount:.10g}", fixed(each.value, 2)) for each in state.paid),
             *((each.date, each.leg, "owed", f"{each.amount:.10g}", fixed(each.value, 2)) for each in state.owed),
         ], words=3)
+    page.items(state.to_deliver)
     if state.accrued:
         page.line(f"  accrued: {state.accrued:.10g}")
     if state.next:

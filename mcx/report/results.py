@@ -325,6 +325,7 @@ class StateView(Result):
     past: tuple[PastLine, ...]
     paid: tuple[Payment, ...]
     owed: tuple[Owed, ...]
+    to_deliver: tuple[str, ...]
     accrued: float
     running: tuple[Sentence, ...]
     ended: str

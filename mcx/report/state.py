@@ -44,14 +44,25 @@ def accrued(dated: DatedContract, state: State) -> float:
     return total
 
 
-def ended(ready: Ready) -> Iterator[str]:
-    """That a contract has ended, and what is still to come of it."""
+def standing(ready: Ready) -> Iterator[str]:
+    """Shares that are owed; that a contract has ended, and what is still to come of it."""
     state = ready.unrolled.state
+    yield from to_deliver(ready.dated, state)
     if state.ended is not None:
         due = [each for each in state.payments if each.owed and each.amount]
         yield (f"the contract ended on {state.ended}, by its fixings: what is owed until {max(str(each.due) for each in due)} "
                "is all that it is worth" if due else
                f"the contract ended on {state.ended}, by its fixings, and nothing is owed any more")
+
+
+def to_deliver(dated: DatedContract, state: State) -> Iterator[str]:
+    """Shares that are certain and not yet delivered."""
+    for each in state.deliveries:
+        if each.due.time >= 0.0:
+            asset = dated.contract.assets[each.asset]
+            unit = "unit" if dated.contract.notional is None else "note"
+            cash = f", and {figure(each.fraction)} of one in cash at the level of {each.day}" if each.fraction else ""
+            yield f"owed on {each.due}: {figure(each.whole)} shares of {asset} for each {unit}{cash}"
 
 
 def state_view(dated: DatedContract, state: State, market: MarketMap) -> StateView:
@@ -65,6 +76,7 @@ def state_view(dated: DatedContract, state: State, market: MarketMap) -> StateVi
                    for each in state.events if each.event.condition is not None or each.event.name),
         paid=tuple(Payment(str(each.due), each.pay.leg, each.amount, each.amount * contract.size) for each in paid),
         owed=owed_amounts(dated, state, market),
+        to_deliver=tuple(to_deliver(dated, state)),
         accrued=accrued(dated, state),
         running=tuple(Sentence(name, _values(dated, name, values))
                       for name, values in (state.terms | state.running).items()),

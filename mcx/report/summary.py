@@ -19,7 +19,7 @@ from mcx.report.results import (
     PriceResult,
     Stage,
 )
-from mcx.report.state import accrued, ended, owed
+from mcx.report.state import accrued, owed, standing
 
 NO_REDUCTION = "none"
 
@@ -65,7 +65,7 @@ def price_result(ready: Ready, market: Market, valuation: Valuation) -> PriceRes
         ended=str(ready.unrolled.state.ended or ""),
         checks=Checks(martingale, tuple(Stage(e.paths, e.value, e.standard_error) for e in valuation.stages)),
         warnings=tuple(warnings(valuation, ready.unrolled.tape, martingale, met)),
-        assumptions=tuple(dict.fromkeys((*ended(ready), *assumptions(dated, market, ready.market)))),
+        assumptions=tuple(dict.fromkeys((*standing(ready), *assumptions(dated, market, ready.market)))),
         limits=tuple(limits(dated)),
         cautions=tuple(cautions(dated, bool(conditions or ends))),
         calendar_version=dated.calendar_version,

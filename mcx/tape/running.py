@@ -109,6 +109,8 @@ class Watched:
         today = Day(0.0, history.valuation)
         day = min(day, today, key=_time)
         stated = history.stated.get(running.name, {})
+        if running.name in history.stated and not stated:
+            return 0.0  # what the contract says of it is at fault
         fixed = self._by_fixings(day)
         if running.how in ("ever", "always"):
             turned = float(running.how == "ever")
