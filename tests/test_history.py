@@ -447,3 +447,16 @@ def test_readback_and_price_ask_for_the_same_fixings(tmp_path: Path, asset: str,
     codes = [mcx(verb, file, *more).code for verb, more in (("price", ("--paths", 64)), ("readback", ()),
                                                             ("readback", ("--calendar",)))]
     assert codes == [0 if known else 2] * 3
+
+
+@pytest.mark.parametrize(("stated", "said"), [
+    ("disruption: {lantern: {2027-06-02: 2027-06-03}}", "'lantern' is not observed on 2027-06-02"),
+    ("happened: {hit: {2027-06-02: true}}", "'hit' is not watched all the time in this contract"),
+    ("happened: {missed: {2027-06-02: 1}}", "'missed' is not a running value that can be watched all the time"),
+    ("adjustments: {quarry: {2027-06-02: 2}}", "'quarry' is not an asset of the contract"),
+    ("adjustments: {lantern: {2027-06-02: -2}}", "expected an amount above 0"),
+])
+def test_what_changes_nothing_is_refused(tmp_path: Path, stated: str, said: str):
+    """A statement that nothing reads is a slip."""
+    found = faults(tmp_path, WORST_OF.replace("payoff:", f"{stated}\npayoff:", 1) + market() + fixings(LEVELS))
+    assert len(found) == 1 and said in found[0], found

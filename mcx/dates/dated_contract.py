@@ -9,7 +9,7 @@ from __future__ import annotations
 import datetime
 from dataclasses import dataclass
 
-from mcx.checked.contract import Contract
+from mcx.checked.contract import Contract, LevelFixing
 from mcx.checked.payoff import Deliver, Event, Pay, Running
 from mcx.dates.day import Day
 from mcx.dates.history import NO_HISTORY, History
@@ -92,6 +92,12 @@ class DatedContract:
     calendar_version: str = ""
     assumptions: tuple[str, ...] = ()
     history: History = NO_HISTORY
+
+    @property
+    def levels_fixed(self) -> tuple[tuple[str, Day], ...]:
+        """The days on which level terms that are observed are fixed, with their names."""
+        return tuple((name, day) for name, days in self.schedules.items() for day in days
+                     if isinstance(self.contract.terms.get(name), LevelFixing))
 
     @property
     def begun(self) -> bool:

@@ -126,6 +126,7 @@ class _Dating:
         days = sorted({*self.updates, *self.events}, key=lambda day: day.time)
         if not self._can_be_read():
             return None, self.faults
+        self._refuse_needless_statements(days)
         if not days and not self.faults:
             self._fault(self.contract.place, "nothing is ever observed or paid: no event has a date")
         dated = DatedContract(
@@ -139,6 +140,22 @@ class _Dating:
         live, faults = readings(dated)
         faults += self.faults
         return (None if faults else _only(dated, live)), faults
+
+    def _refuse_needless_statements(self, days: list[Day]) -> None:
+        """Disrupted days on which nothing is observed, and statements about what is not watched all the time."""
+        fixed = [day for name, found in self.schedules.items() for day in found
+                 if isinstance(self.contract.terms[name], LevelFixing)]
+        observed = {day.date for day in (*days, *fixed)}
+        for asset, dates in self.contract.disruption.items():
+            for date, known in dates.items():
+                if date not in observed:
+                    self._fault(known.place, f"'{asset}' is not observed on {date}, so that no observation is moved")
+        watched = {watch.running.name for watch in self.watches}
+        for name, dates in self.contract.happened.items():
+            for known in dates.values():
+                if name not in watched:
+                    self._fault(known.place, f"'{name}' is not watched all the time in this contract: what happened follows "
+                                             "from its fixings")
 
     def _can_be_read(self) -> bool:
         """Whether all that decides which formulas are read is known: every term but numbers that must be stated."""

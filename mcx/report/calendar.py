@@ -30,6 +30,9 @@ def _lines(dated: DatedContract, state: State | None) -> Iterator[tuple[float, C
         yield line(each.due, "payment", f"{each.pay.leg} (owed)")
     if state is not None and state.ended is not None:
         return
+    for name, day in dated.levels_fixed:
+        if day.time >= 0.0:
+            yield line(day, "fixing", f"{joined(contract.assets)} for {name}")
     payments: dict[tuple[Day, str], None] = {}
     for moment in dated.moments:
         if moment.day.time < 0.0:

@@ -169,7 +169,11 @@ def _dates(dated: DatedContract, words: Words, settled: Settled) -> Iterator[Dat
     ends = [(watch.start, "the watch begins", watch) for watch in read]
     ends += [(watch.end, "the watch ends", watch) for watch in read]
     ends.sort(key=lambda item: item[0].time)
+    fixed = sorted(dated.levels_fixed, key=lambda item: item[1].time)
     for moment in dated.moments:
+        while fixed and fixed[0][1].time <= moment.day.time:
+            name, day = fixed.pop(0)
+            yield DateLine(str(day), 0, f"{name} observed", "", "")
         while ends and ends[0][0].time < moment.day.time:
             yield _watch_line(*ends.pop(0))
         for update in moment.updates:
