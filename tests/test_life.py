@@ -4,11 +4,14 @@ observation dates; values of the future, with what was paid, are a martingale ov
 from __future__ import annotations
 
 from datetime import date, timedelta
-from math import exp, sqrt
+from math import exp, log, pi, sqrt
 
 import numpy as np
 import pytest
 from helpers import Ready, prepare
+from scipy.special import ndtr
+
+import mcx
 
 SEED, PATHS = 20261201, 4096
 RATE, YIELD, VOL, SPREAD = 0.021, 0.024, 0.2, 0.008
@@ -226,3 +229,61 @@ def test_after_its_last_payment_a_contract_is_worth_nothing():
     """All is fixed, all is paid."""
     found = prepare(TAIL + market(date(2028, 1, 10), 77.0, HISTORY))
     assert found.price(64, SEED).mean == 0.0
+
+
+# Sensitivities under fixings
+
+
+def lines(folder, text: str, paths: int = 1 << 12) -> dict[tuple[str, str, str], float]:
+    """Every sensitivity by name, asset and tenor."""
+    file = folder / "case.yaml"
+    file.write_text(text)
+    return {(each.name, each.asset, each.tenor): each for each in mcx.greeks(file, paths=paths, seed=SEED).greeks}
+
+
+def test_sensitivities_with_history_are_those_of_a_new_contract_with_its_state(tmp_path):
+    """On the same numbers, likelihood ratios with their controls: fixings are constants to both."""
+    today = date(2027, 10, 4)
+    old = lines(tmp_path, AUTOCALL + market(today, 93.0, HISTORY))
+    new = lines(tmp_path, by_hand(today, HISTORY) + market(today, 93.0))
+    assert old.keys() == new.keys()
+    for key, found in old.items():
+        assert found.value == pytest.approx(new[key].value, rel=1e-9, abs=1e-12), key
+        assert found.standard_error == pytest.approx(new[key].standard_error, rel=1e-9, abs=1e-12), key
+
+
+def test_sensitivities_of_an_average_with_one_fixing_to_come(tmp_path):
+    """It is a fourth of a call: delta, vega, rho and funding by Black's formula."""
+    today, spot = date(2027, 9, 20), 104.0
+    time = (date(2027, 12, 1) - today).days / 365
+    due = (date(2027, 12, 8) - today).days / 365
+    strike = 4 * 95.0 - sum(HISTORY[day] for day in ("2027-03-01", "2027-06-01", "2027-09-01"))
+    forward, df = spot * exp((RATE - YIELD) * time), exp(-(RATE + SPREAD) * due)
+    deviation = VOL * sqrt(time)
+    d1 = log(forward / strike) / deviation + deviation / 2
+    value = df * (forward * ndtr(d1) - strike * ndtr(d1 - deviation)) / 4
+    found = lines(tmp_path, TAIL + market(today, spot, HISTORY), 1 << 17)
+    bond = df * 90
+    by_forward = df * ndtr(d1) / 4
+    for key, truth in {
+        ("delta", "harbour", ""): by_forward * forward / spot,
+        ("vega", "harbour", ""): 0.01 * df * forward * sqrt(time) * exp(-d1 * d1 / 2) / sqrt(2 * pi) / 4,
+        ("rho", "EUR", ""): 1e-4 * (by_forward * forward * time - due * (value + bond)),
+        ("funding", "EUR", ""): -1e-4 * due * (value + bond),
+    }.items():
+        assert abs(found[key].value - truth) < 4 * found[key].standard_error + 1e-12, key
+        assert found[key].standard_error < 0.02 * abs(truth), key
+
+
+def test_locked_returns_of_a_cliquet():
+    """Returns of the past are locked by fixings: the same with the levels written into one payment."""
+    head = AUTOCALL.split("payoff:")[0].replace("note", "c")
+    own = ("payoff: locked\nterms: {resets: {type: dates}}\nrunning:\n  returns:\n    total: \"clip(spot / "
+           "previous(spot, 100) - 1, -2%, 3%)\"\n    at: resets\nevents:\n  - {at: resets.last, pay: \"max(returns, 0)\"}\n---\n")
+    old = own + head + "payoff: locked\nterms: {resets: [2027-03-01, 2027-06-01, 2027-09-01]}\n---\n"
+    today = date(2027, 7, 1)
+    locked = sum(min(max(each, -0.02), 0.03) for each in (88.4 / 100 - 1, 97.2 / 88.4 - 1))
+    new = own.replace("locked", "fresh").replace("previous(spot, 100)", "97.2").replace(
+        "max(returns, 0)", f"max(returns + ({locked!r}), 0)") + head.replace("start: 2026-12-01", f"start: {today}") + (
+        "payoff: fresh\nterms: {resets: [2027-09-01]}\n---\n")
+    assert exact(old + market(today, 96.0, HISTORY)) == pytest.approx(exact(new + market(today, 96.0)), rel=1e-12)

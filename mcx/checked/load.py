@@ -129,7 +129,7 @@ def _pair(contract_body: Mapping, market_body: Mapping, contract: Contract | Non
 def _tables(markets: list[Document], given: list[Document]) -> tuple[list[Document], list[Fault]]:
     """The CSV file of fixings that the market names, taken from those given or read from its place."""
     wanted = file_of(markets[0]) if markets else ""
-    found = [table for table in given if Path(table.file) == Path(wanted)] if wanted else []
+    found = [table for table in given if Path(table.file).absolute() == Path(wanted).absolute()] if wanted else []
     faults = [Fault(Place(table.file, 1, 1), "no market names this file of fixings; write 'fixings: NAME.csv' in it")
               for table in given if table not in found]
     if wanted and not found:

@@ -177,7 +177,7 @@ class _Dating:
 
     def _refuse_dates_before_start(self) -> None:
         for name, days in self.schedules.items():
-            if days[0].time < self.start.time:
+            if days[0].time < self.start.time and not isinstance(self.contract.terms[name], LevelFixing):
                 self._fault(place_of(self.contract.terms[name], 0),
                             f"{days[0]} lies before the contract's start {self.start}")
 
@@ -344,7 +344,9 @@ def _only(dated: DatedContract, live: frozenset[str]) -> DatedContract:
 def _today(dated: DatedContract) -> str:
     """Which level an observation on the valuation date uses, for each asset."""
     names, day = dated.contract.assets, Day(0.0, dated.valuation)
-    fixed = [name for number, name in enumerate(names) if dated.history.level(number, day) is not None]
+    history = dated.history
+    fixed = [name for number, name in enumerate(names)
+             if history.level(number, history.observed(number, day)) is not None]
     if len(fixed) == len(names):
         what = "that day's fixing"
     elif fixed:

@@ -24,6 +24,7 @@ from mcx.tape.state import State
 
 OVER_ASSETS = ("worst", "best", "mean", "any", "all", "ranked")
 STRAIGHT = 1e-9  # relative
+TURNED = {"ever": (1.0,), "always": (0.0,)}  # and so for good
 
 
 def distances(dated: DatedContract, state: State, market: MarketMap) -> Iterator[Distance]:
@@ -34,7 +35,7 @@ def distances(dated: DatedContract, state: State, market: MarketMap) -> Iterator
     scale = dated.history.scale or (1.0,) * len(dated.contract.assets)
     today = [market.forward(asset, 0.0) * each for asset, each in zip(dated.contract.assets, scale, strict=True)]
     seen: set[tuple] = set()
-    for what, date, formula, occasion in _conditions(dated, settled):
+    for what, date, formula, occasion in _conditions(dated, settled, state):
         for comparison in _comparisons(formula, settled.lets):
             for asset, level in _turns(comparison, dated, state, occasion, today):
                 name = dated.contract.assets[asset]
@@ -43,17 +44,19 @@ def distances(dated: DatedContract, state: State, market: MarketMap) -> Iterator
                     yield Distance(what, date, name, level, today[asset], level / today[asset] - 1.0)
 
 
-def _conditions(dated: DatedContract, settled: Settled) -> Iterator[tuple[str, str, Formula, Occasion | None]]:
-    """What is decided next: of every running flag and every event the first time after the valuation date."""
+def _conditions(dated: DatedContract, settled: Settled, state: State) -> Iterator[tuple[str, str, Formula, Occasion | None]]:
+    """What is decided next: of every running flag that has not turned for good, and of every event, the first
+    time after the valuation date."""
     wanted = {running.name: running for running in settled.running}
     later = [moment for moment in dated.moments if moment.day.time > 0.0]
     told: set[object] = set()
+    turned = {name for name, running in wanted.items() if state.running.get(name) == TURNED.get(running.how, ())}
     for watch in dated.watches:
-        if watch.end.time > 0.0 and watch.running.name in wanted:
+        if watch.end.time > 0.0 and watch.running.name in wanted and watch.running.name not in turned:
             yield watch.running.name, f"until {watch.end}", settled.formula(watch.running.formula), None
     for moment in later:
         for update in moment.updates:
-            if update.running.name in wanted and update.running.name not in told:
+            if update.running.name in wanted and update.running.name not in told | turned:
                 told.add(update.running.name)
                 yield update.running.name, str(moment.day), settled.formula(update.running.formula), update.occasion
         for each in moment.events:
