@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING
 
 from mcx.checked.load import Request, checked_request
 from mcx.dates.dated_contract import DatedContract
-from mcx.dates.dating import date_contract
+from mcx.dates.dating import date_on
 from mcx.faults import Fault, InputError, Place, Refusal, RequestError, did_you_mean
 from mcx.text.documents import read_documents
 from mcx.text.located import Document
@@ -25,7 +25,7 @@ if TYPE_CHECKING:
     from mcx.estimators.plan import Precision
     from mcx.estimators.price import Ready
     from mcx.report.greek_results import GreeksResult, GreeksTable
-    from mcx.report.results import Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay
+    from mcx.report.results import CalendarView, Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay
 
 File = str | Path
 Progress = Callable[[int, int, float], None]  # paths done, paths planned, standard error so far (unit of the price)
@@ -129,21 +129,29 @@ def greeks(
     return table.contracts[0] if len(made.contracts) == 1 else table
 
 
-def readback(*files: File, path: File | None = None) -> Readback | ReadbackTable:
-    """What every contract in the files says, in sentences and dates; with a market also what that says on the dates.
+def readback(*files: File, path: File | None = None, calendar: bool = False) -> Readback | ReadbackTable | CalendarView:
+    """What every contract in the files says, in sentences and dates; with a market also what that says on the dates,
+    and what has become of the contract by its valuation date.
 
     `path` names a file of levels (YAML by asset and date, or CSV) that is run through the one contract in the files.
+    `calendar` gives in place of all that one list of the fixings, decisions and payments to come of all contracts.
     Raises InputError, RequestError.
     """
     from mcx.report.readback import readback as read_back
     from mcx.report.results import ReadbackTable
 
     made, dated = _dated(files, with_market=False)
+    if path is not None and calendar:
+        raise RequestError("levels are run through one contract; a calendar lists what comes next of all")
     if path is not None and len(dated) > 1:
         raise RequestError(f"levels can be run through one contract at a time; the files hold {len(dated)}")
     if made.market is not None:
         _check_dividends(made.market, dated)
     given = None if path is None else _on_levels(dated[0], path)
+    if path is None and made.market is not None:
+        _check_fixings(dated)
+    if calendar:
+        return _calendar(made, dated)
     found = tuple(read_back(each, made.market, given) for each in dated)
     return found[0] if len(found) == 1 else ReadbackTable(found)
 
@@ -240,23 +248,43 @@ def _all_dated(made: Request, faults: Iterable[Fault]) -> list[DatedContract]:
     """Every contract of a request with its dates; raises InputError with all faults."""
     faults, dated = list(faults), []
     for contract in made.contracts:
-        found, wrong = date_contract(contract, made.market.valuation if made.market else None)
+        found, wrong = date_on(contract, made.market)
         faults += wrong
         if found is not None:
             dated.append(found)
     if faults:
-        raise InputError([*faults, *_watches_refused(dated)])
+        raise InputError([*faults, *_refused(dated)])
     return dated
 
 
-def _watches_refused(dated: Iterable[DatedContract]) -> list[Fault]:
-    """The continuous watches that cannot be simulated, so that they are told beside the faults of the documents."""
-    watched = [each for each in dated if each.watches]
+def _refused(dated: Iterable[DatedContract]) -> list[Fault]:
+    """Continuous watches that cannot be simulated and fixings that are missing, so that they are told beside the faults
+    of the documents."""
+    watched = [each for each in dated if each.watches or each.begun]
     if not watched:
         return []
     from mcx.tape.unroll import unroll
 
-    return [fault for each in watched for fault in unroll(each, nodes=()).faults]
+    return [fault for each in watched for fault in unroll(each, nodes=()).faults
+            if each.history.sound or fault.place != each.history.place]  # what was misspelt is not missing as well
+
+
+def _check_fixings(dated: Iterable[DatedContract]) -> None:
+    """Raises InputError with every fixing that is missing. What else the tape refuses, the readback says."""
+    from mcx.tape.unroll import unroll
+
+    faults = [fault for each in dated if each.begun for fault in unroll(each, nodes=()).faults]
+    if faults:
+        raise InputError(faults)
+
+
+def _calendar(made: Request, dated: Sequence[DatedContract]) -> CalendarView:
+    """What comes next of every contract; what is known of the past needs a market."""
+    from mcx.report.calendar import calendar
+    from mcx.tape.unroll import unroll
+
+    states = [unroll(each, nodes=()).state if made.market else None for each in dated]
+    return calendar(zip(dated, states, strict=True))
 
 
 def _check_dividends(market: Market, dated: Iterable[DatedContract]) -> None:
@@ -353,7 +381,7 @@ def _on_levels(dated: DatedContract, path: File):
     except (OSError, ValueError) as error:
         raise RequestError(f"{file}: the levels cannot be read: {getattr(error, 'strerror', None) or error}") from None
     levels, faults = read_levels(data, file, dated)
-    unrolled = unroll(dated, nodes=())
+    unrolled = unroll(dated, nodes=(), given=True)
     faults += unrolled.faults
     if not faults:
         found, faults = run_levels(dated, unrolled.observed, levels, file)

@@ -130,12 +130,13 @@ def greeks(files: tuple[str, ...], as_json: bool, ladder: bool, grid: bool, spot
 @cli.command()
 @FILES
 @click.option("--path", type=click.Path(), help="Levels (YAML or CSV) to run through the contract.")
+@click.option("--calendar", is_flag=True, help="Fixings, decisions and payments to come, of all contracts.")
 @AS_JSON
-def readback(files: tuple[str, ...], path: str | None, as_json: bool) -> None:
+def readback(files: tuple[str, ...], path: str | None, calendar: bool, as_json: bool) -> None:
     """What does the contract say? Plain sentences, and every date."""
     from mcx import api
 
-    _show(api.readback(*files, path=path), as_json, _readback_view)
+    _show(api.readback(*files, path=path, calendar=calendar), as_json, _calendar_view if calendar else _readback_view)
 
 
 @cli.command()
@@ -264,6 +265,12 @@ def _readback_view(result: Result, page: Page) -> None:
         if number:
             page.line()
         show_readback(each, page)
+
+
+def _calendar_view(result: Result, page: Page) -> None:
+    from mcx.report.readback_view import show_calendar
+
+    show_calendar(result, page)
 
 
 def _library_view(result: Result, page: Page) -> None:

@@ -14,6 +14,7 @@ from pathlib import Path
 from mcx.checked.contract import Contract
 from mcx.checked.conversions import conversion_faults, conversions, read_conversion, simulated_rates
 from mcx.checked.curves import valuation_of
+from mcx.checked.fixings import file_of
 from mcx.checked.library import Definitions, clashes, stands_for_shipped
 from mcx.checked.market import Market
 from mcx.checked.payoff import BOND, MULTIPLES
@@ -93,7 +94,10 @@ def checked_request(
     used: dict[str, Document] = {}
     contracts: list[Contract] = []
     markets = kinds.get("market", [])
-    market, wrong = read_market(markets[0]) if markets else (None, [])
+    tables, wrong = _tables(markets, kinds.get("fixings", []))
+    documents += tuple(table for table in tables if table not in documents)
+    faults += wrong
+    market, wrong = read_market(markets[0], tables[0] if tables else None) if markets else (None, [])
     faults += wrong
     for document in kinds.get("contract", []):
         contract, wrong = read_contract(document, definitions)
@@ -121,6 +125,19 @@ def _pair(contract_body: Mapping, market_body: Mapping, contract: Contract | Non
         currency=read(contract_body, "currency", currency_code, said) or "",
         assets=asset_names(contract_body.get("assets"), said),
         contract=contract, market=market, contract_body=contract_body, market_body=market_body)
+
+
+def _tables(markets: list[Document], given: list[Document]) -> tuple[list[Document], list[Fault]]:
+    """The CSV file of fixings that the market names, taken from those given or read from its place."""
+    wanted = file_of(markets[0]) if markets else ""
+    found = [table for table in given if Path(table.file).absolute() == Path(wanted).absolute()] if wanted else []
+    faults = [Fault(Place(table.file, 1, 1), "no market names this file of fixings; write 'fixings: NAME.csv' in it")
+              for table in given if table not in found]
+    if wanted and not found:
+        found, wrong = read_documents([wanted])
+        place = markets[0].body.get("fixings").place
+        faults += [Fault(place, f"the fixings in '{wanted}': {fault.text}") for fault in wrong]
+    return found, faults
 
 
 def _only_one_market(markets: list[Document]) -> list[Fault]:

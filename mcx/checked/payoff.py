@@ -95,6 +95,14 @@ class Pay:
 
 
 @dataclass(frozen=True, slots=True)
+class Deliver(Pay):
+    """Deliver shares: `amount` of each asset for each unit of the notional (or each unit), of the assets for which the
+    flag `which` holds (None: all of them)."""
+
+    which: Formula | None = None
+
+
+@dataclass(frozen=True, slots=True)
 class Assign:
     """`set`: all right sides are read before any is written."""
 

@@ -23,7 +23,15 @@ from mcx.estimators.ladder import Point, Step, grid, ladder, spot_shifts, today,
 from mcx.estimators.methods import PATHWISE, Method, methods
 from mcx.estimators.plan import Plan, Precision, plan
 from mcx.estimators.price import Ready
-from mcx.estimators.revalue import RATES, Revaluer, central_differences, impossible, second_differences, step_of
+from mcx.estimators.revalue import (
+    IN_PROPORTION,
+    RATES,
+    Revaluer,
+    central_differences,
+    impossible,
+    second_differences,
+    step_of,
+)
 from mcx.estimators.sensitivities import Curvature, Sensitivity, first_order, second_order
 from mcx.estimators.theta import between, theta
 from mcx.leaves.jacobian import Input, inputs, moved, without_derivative
@@ -330,7 +338,7 @@ def _so_many(number: float, unit: str) -> str:
 
 
 def _bumped(number: Input, size: float) -> str:
-    if number.kind in ("spot", "forward"):
+    if number.kind in IN_PROPORTION:
         return f"moved by ±{100 * size:.3g} %"
     step = step_of(number, size)
     return f"moved by ±{1e4 * step:.3g} bp" if number.kind in RATES else f"moved by ±{_so_many(100 * step, 'point')}"
