@@ -101,12 +101,14 @@ def _otherwise(reading: OtherReading, contract: Contract, terms: Mapping, start:
     changed = {name: with_start(contract.payoff, node, start) for name, node in reading.values}
     stated = {key.text: (key, changed.pop(key.text, value)) for key, value in terms.entries}
     added = ((Scalar(name, node.place), node) for name, node in changed.items())
-    reader = TermReader(reading.payoff, contract.assets, faults)
+    reader = TermReader(contract.payoff, contract.assets, faults)
     values = reader.read(Mapping((*stated.values(), *added), terms.place), terms.place)
     _check_times(reader.written, contract.textbook, values, faults)
     if faults:
         return ContractOtherwise(reading, None, tuple(faults))
-    payoff = replace(_begun(reading.payoff, values), readings=())
+    # What the contract states may not count in this reading (a strike that the average takes the place of).
+    known = tuple(replace(term, optional=term.name not in values) for term in reading.payoff.terms)
+    payoff = replace(_begun(reading.payoff, values), terms=known)
     return ContractOtherwise(reading, replace(contract, payoff=payoff, terms=values))
 
 

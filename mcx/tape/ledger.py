@@ -14,6 +14,18 @@ MOST_DAYS = 64  # dates listed one by one; more ends are grouped by year, more c
 UNSORTED = "unsorted"
 
 
+@dataclass(frozen=True, slots=True)
+class Payment:
+    """One amount that may be owed: `amount`, not discounted, is paid on `due` where `flag`; both are values of the
+    tape."""
+
+    leg: str
+    part: str
+    due: Day
+    flag: int
+    amount: int
+
+
 @dataclass(slots=True)
 class Ledger:
     """Sums and flags by name, as values of the tape."""
@@ -25,6 +37,7 @@ class Ledger:
     ends: dict[Day, int] = field(default_factory=dict)
     lives: list[tuple[int, float]] = field(default_factory=list)  # flag of the ending, time of its payment
     last_payment: float = 0.0
+    payments: list[Payment] = field(default_factory=list)
 
     @staticmethod
     def opened(builder: Builder, payoff: Payoff) -> Ledger:
@@ -38,8 +51,9 @@ class Ledger:
         ledger.conditions = {event.name: {} for event in payoff.events if event.name}
         return ledger
 
-    def pay(self, pay: Pay, present_value: int, due: Day) -> None:
+    def pay(self, pay: Pay, amount: int, flag: int, present_value: int, due: Day) -> None:
         add = self.builder.emit
+        self.payments.append(Payment(pay.leg, pay.part, due, flag, amount))
         self.legs[pay.leg] = add(Op.ADD, self.legs[pay.leg], present_value, place=pay.place)
         if self.parts:
             part = pay.part or UNSORTED

@@ -16,7 +16,7 @@ from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Occasion, U
 from mcx.faults import Fault, Place
 from mcx.tape.builder import Builder
 from mcx.tape.formulas import Formulas, Scene, Unreadable, Values
-from mcx.tape.ledger import Ledger
+from mcx.tape.ledger import Ledger, Payment
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Instruction, Leaf, LeafKind, LevelKey, Output, Tape
@@ -69,6 +69,30 @@ def unroll(dated: DatedContract, *, nodes: Sequence[float]) -> Unrolled:
     return Unrolled(tape, observed, grid, levels, walk.notes())
 
 
+@dataclass(frozen=True, slots=True)
+class Walked:
+    """A contract on a tape that may hold others beside it, as values of that tape.
+
+    outputs   all named results but the levels, price first
+    payments  every amount that may be owed, in the order in which it is decided
+    ends      for each day on which the contract may end early, whether it does; at most one of them is true
+    """
+
+    outputs: tuple[Output, ...]
+    payments: tuple[Payment, ...]
+    ends: tuple[int, ...]
+    faults: tuple[Fault, ...]
+
+
+def walked(dated: DatedContract, builder: Builder) -> Walked:
+    """A contract put on a tape under construction, still reading levels. Contracts that share a builder share what
+    they have in common; continuous watches are not checked against each other."""
+    walk = _Walk(dated, builder)
+    walk.run()
+    ledger = walk.ledger
+    return Walked(tuple(ledger.outputs()), tuple(ledger.payments), tuple(ledger.ends.values()), tuple(walk.faults))
+
+
 def _with_last_levels(tape: Tape, assets: Sequence[str]) -> tuple[Tape, dict[str, tuple[int, float]]]:
     """The tape with each simulated asset's level at its last observed time as an output, for the martingale test."""
     last: dict[int, float] = {}
@@ -104,10 +128,10 @@ class _Branch:
 class _Walk:
     """The state of a contract while its dates are walked: alive flag, running values, ledger, faults."""
 
-    def __init__(self, dated: DatedContract):
+    def __init__(self, dated: DatedContract, builder: Builder | None = None):
         self.dated = dated
         payoff = dated.contract.payoff
-        self.builder = Builder()
+        self.builder = builder or Builder()
         self.formulas = Formulas(dated.contract, self.builder)
         self.ledger = Ledger.opened(self.builder, payoff)
         self.alive = self.builder.constant(1.0)
@@ -218,7 +242,7 @@ class _Walk:
         discount = self.builder.leaf(Leaf(LeafKind.DISCOUNT, end=due.time))
         present = emit(Op.MUL, amount, discount, place=pay.place)
         paid = emit(Op.SELECT, flag, present, self.builder.constant(0.0), place=pay.place)
-        self.ledger.pay(pay, paid, due)
+        self.ledger.pay(pay, amount, flag, paid, due)
 
     def _merge(self, condition: int, yes: dict[str, Values], no: dict[str, Values]) -> None:
         for name, value in yes.items():
