@@ -6,6 +6,7 @@ from dataclasses import dataclass, field
 
 from mcx.checked.payoff import Pay, Payoff
 from mcx.dates.dated_contract import Day
+from mcx.faults import Place
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
 from mcx.tape.program import Output
@@ -17,10 +18,12 @@ UNSORTED = "unsorted"
 @dataclass(frozen=True, slots=True)
 class Payment:
     """One amount that may be owed: `amount`, not discounted, is paid on `due` where `flag`; both are values of the
-    tape."""
+    tape. `decided` is the day of the event that stands at `event` in the definition."""
 
     leg: str
     part: str
+    event: Place
+    decided: Day
     due: Day
     flag: int
     amount: int
@@ -51,9 +54,9 @@ class Ledger:
         ledger.conditions = {event.name: {} for event in payoff.events if event.name}
         return ledger
 
-    def pay(self, pay: Pay, amount: int, flag: int, present_value: int, due: Day) -> None:
-        add = self.builder.emit
-        self.payments.append(Payment(pay.leg, pay.part, due, flag, amount))
+    def pay(self, pay: Pay, present_value: int, owed: Payment) -> None:
+        add, due = self.builder.emit, owed.due
+        self.payments.append(owed)
         self.legs[pay.leg] = add(Op.ADD, self.legs[pay.leg], present_value, place=pay.place)
         if self.parts:
             part = pay.part or UNSORTED

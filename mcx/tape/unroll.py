@@ -80,7 +80,7 @@ class Walked:
 
     outputs: tuple[Output, ...]
     payments: tuple[Payment, ...]
-    ends: tuple[int, ...]
+    ends: dict[Day, int]
     faults: tuple[Fault, ...]
 
 
@@ -90,7 +90,7 @@ def walked(dated: DatedContract, builder: Builder) -> Walked:
     walk = _Walk(dated, builder)
     walk.run()
     ledger = walk.ledger
-    return Walked(tuple(ledger.outputs()), tuple(ledger.payments), tuple(ledger.ends.values()), tuple(walk.faults))
+    return Walked(tuple(ledger.outputs()), tuple(ledger.payments), dict(ledger.ends), tuple(walk.faults))
 
 
 def _with_last_levels(tape: Tape, assets: Sequence[str]) -> tuple[Tape, dict[str, tuple[int, float]]]:
@@ -162,6 +162,8 @@ class _Walk:
             for update in moment.updates:
                 self._update(update)
             for number, event in enumerate(moment.events):
+                if self.builder.number(self.alive) == 0.0:  # what stands below it on this day is not reached
+                    break
                 try:
                     self._event(event, moment.events[: number + 1])
                 except Unreadable as trouble:
@@ -227,8 +229,8 @@ class _Walk:
         for action in actions:
             match action:
                 case Pay():
-                    due = dated.due[action]
-                    self._pay(action, self.formulas.one(action.amount, scene), due, flag)
+                    due, amount = dated.due[action], self.formulas.one(action.amount, scene)
+                    self._pay(action, Payment(action.leg, action.part, dated.event.place, day, due, flag, amount))
                     branch.due.append(due.time)
                 case Assign(values=pairs):
                     branch.values.update({name: self.formulas.read(value, scene) for name, value in pairs})
@@ -237,12 +239,11 @@ class _Walk:
                     break
         return branch
 
-    def _pay(self, pay: Pay, amount: int, due: Day, flag: int) -> None:
+    def _pay(self, pay: Pay, owed: Payment) -> None:
         emit = self.builder.emit
-        discount = self.builder.leaf(Leaf(LeafKind.DISCOUNT, end=due.time))
-        present = emit(Op.MUL, amount, discount, place=pay.place)
-        paid = emit(Op.SELECT, flag, present, self.builder.constant(0.0), place=pay.place)
-        self.ledger.pay(pay, amount, flag, paid, due)
+        discount = self.builder.leaf(Leaf(LeafKind.DISCOUNT, end=owed.due.time))
+        present = emit(Op.MUL, owed.amount, discount, place=pay.place)
+        self.ledger.pay(pay, emit(Op.SELECT, owed.flag, present, self.builder.constant(0.0), place=pay.place), owed)
 
     def _merge(self, condition: int, yes: dict[str, Values], no: dict[str, Values]) -> None:
         for name, value in yes.items():
