@@ -82,7 +82,7 @@ class Certain:
         return _extreme(self._ways(discount, 1, max), max)
 
     def _ways(self, discount: Discount, end: int, pick: Callable) -> Iterator[Extreme]:
-        """The extreme of each way that the contract can go; `end` is 0 for the lower ends of amounts, 1 for the upper."""
+        """The extreme of each way that the contract can go; `end` is 0 for the lower ends of amounts, else 1."""
 
         def of(choices: Iterable[Choice]) -> float:
             return math.fsum(pick(sum(owed.amount[end] * discount(owed.payment.due.time) for owed in outcome)
@@ -133,7 +133,8 @@ def certain(dated: DatedContract) -> Certain:
         if day not in walk.ends:
             stages.append(Stage(day, _choices(payments, case)))
             continue
-        ends, case = case.given({walk.ends[day]: YES}), case.given({walk.ends[day]: NO})
+        flag = walk.ends[day]
+        ends, case = case.given({flag: YES}, max(flag, _last(payments))), case.given({flag: NO})
         stages.append(Stage(day, None if case is None else _choices(payments, case),
                             None if ends is None else _choices(payments, ends)))
         if case is None:
@@ -152,8 +153,13 @@ def _outcomes(payments: list[Payment], case: Case) -> Iterator[Outcome]:
     """What an event may owe: the payments of one of its sides, or nothing."""
     flags = dict.fromkeys(payment.flag for payment in payments)
     for flag in flags:
-        there = case.given({flag: YES})
+        there = case.given({flag: YES}, _last(payments))
         if there is not None:
             yield tuple(Owed(payment, there[payment.amount]) for payment in payments if payment.flag == flag)
-    if case.given(dict.fromkeys(flags, NO)) is not None:
+    if case.given(dict.fromkeys(flags, NO), _last(payments)) is not None:
         yield ()
+
+
+def _last(payments: Iterable[Payment]) -> int:
+    """The value of the tape after which nothing says anything of these payments."""
+    return max((value for payment in payments for value in (payment.flag, payment.amount)), default=0)

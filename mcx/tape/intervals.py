@@ -242,16 +242,17 @@ class Case:
     def __getitem__(self, value: int) -> Interval:
         return self._narrower.get(value) or self._intervals.whole[value]
 
-    def given(self, assumed: Mapping[int, Interval]) -> Case | None:
-        """The case in which values lie in these intervals as well; None where no path is in it."""
+    def given(self, assumed: Mapping[int, Interval], until: int | None = None) -> Case | None:
+        """The case in which values lie in these intervals as well; None where no path is in it. Values that stand after
+        `until` on the tape are of no interest and keep the intervals they have."""
         case = Case(self._intervals, self._narrower)
         try:
-            case._assume(assumed)
+            case._assume(assumed, len(self._intervals.steps) if until is None else until)
         except Impossible:
             return None
         return case
 
-    def _assume(self, assumed: Mapping[int, Interval]) -> None:
+    def _assume(self, assumed: Mapping[int, Interval], until: int) -> None:
         changed: deque[int] = deque()
         visits: dict[int, int] = {}
         for value, interval in assumed.items():
@@ -262,7 +263,7 @@ class Case:
             if visits[value] > MOST_VISITS:
                 continue
             for number in (value, *self._intervals.users[value]):
-                for other, interval in self._implied(number):
+                for other, interval in self._implied(number) if number <= until else ():
                     self._narrow(other, interval, changed)
 
     def _implied(self, number: int) -> Iterator[tuple[int, Interval]]:
