@@ -203,6 +203,61 @@ def test_a_paired_difference_is_that_of_two_contracts_with_fresh_numbers():
     assert abs(found.difference.value - (other.mean - alone.mean)) < 4 * error
 
 
+TWO_SIDES = """\
+payoff: two_sides
+terms:
+  below:  {type: watch}
+  above:  {type: watch}
+  expiry: {type: date}
+running:
+  fell: {ever: spot <= 85, at: below}
+  rose: {ever: spot >= 115, at: above}
+events:
+  - at: expiry
+    pay: 1 if (fell or rose) else 0
+readings:
+  - name: both all the time
+    about: Both sides are watched continuously.
+    terms:
+      above: {continuous: [start, expiry]}
+  - name: the other side
+    about: The upper side is watched continuously, the lower one at expiry.
+    terms:
+      below: expiry
+      above: {continuous: [start, expiry]}
+---
+contract: Two sides
+currency: EUR
+units: 1
+assets: [north]
+payoff: two_sides
+terms:
+  below: {continuous: [0y, 1y]}
+  above: expiry
+  expiry: 1y
+---
+market: 0y
+rates: {EUR: 2%}
+assets:
+  north: {spot: 100, currency: EUR, yield: 1%, vol: 20%}
+"""
+
+
+def test_watches_are_refused_within_a_reading_and_not_across_readings():
+    """One reading watches both sides of an asset at once, which is refused; another only the side that the contract
+    does not watch, which has its own law beside the contract's."""
+    values = valued(TWO_SIDES, 17, 1 << 18)
+    assert [one.name for one in values.refused] == ["both all the time"]
+    assert "from both sides at once" in str(values.refused[0].faults[0])
+    (other,) = values.readings
+    turned = TWO_SIDES.replace("  below: {continuous: [0y, 1y]}\n  above: expiry\n",
+                               "  below: expiry\n  above: {continuous: [0y, 1y]}\n")
+    for found, text in ((values.price, TWO_SIDES), (other.price, turned)):
+        alone = prepare(text).price(1 << 18, 18)
+        assert abs(found.value - alone.mean) < 4 * np.hypot(found.standard_error, alone.error)
+        assert found.standard_error < 5e-3 * found.value
+
+
 def test_pairs_are_sharper_than_two_runs():
     values = valued(NOTE, 14)
     close = next(one for one in values.readings if one.name == "one business day later")

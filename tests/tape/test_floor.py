@@ -145,6 +145,15 @@ def test_payments_that_may_not_be_owed_can_be_nothing():
         ("consolation", 3.0, 0.0, pytest.approx(0.04))]
 
 
+def test_what_is_paid_unless_the_note_was_called_can_be_nothing():
+    always = "  - at: fixings.{}\n    pay: 0.5\n    as: {}\n"
+    text = NOTE.replace("events:\n", "events:\n" + always.format("first", "early")).replace(
+        "---\ncontract", always.format("last", "late") + "---\ncontract", 1)
+    ranges = {one.leg: (one.least, one.most) for one in note(text).payments()}
+    assert ranges["early"] == (0.5, 0.5) and ranges["late"] == (0.0, 0.5)
+    assert note(text).least(lambda time: 1.0).value == pytest.approx(0.5 + min(1.02, 0.94 + 0.5))
+
+
 def test_a_contract_that_always_ends_goes_no_further():
     text = NOTE.replace("if: above\n    then:\n      - pay: 1 + 0.02 * nth", "if: worst(spot) >= 0\n    then:\n"
                                                                           "      - pay: 1 + 0.02 * nth")

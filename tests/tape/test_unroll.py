@@ -261,7 +261,7 @@ def test_parts_are_sorted_where_any_is_stated():
 
 def test_what_stands_below_a_certain_end_is_not_reached():
     """It may read what has no value there, since nobody asks."""
-    dated = made({"t": (1.0, 2.0), "late": (2.0,)}, [event("t", end()), event("t", pay("average"))],
+    dated = made({"t": (1.0, 2.0), "late": (2.0,)}, [event("t", end()), event("t", pay("1"), condition="average > 1")],
                  [running("average", "average", "spot", "late")])
     assert unroll(dated, nodes=()).faults == ()
 
