@@ -7,13 +7,14 @@ import signal
 import tempfile
 
 import pytest
-from hypothesis import settings
+from hypothesis import HealthCheck, settings
 
 CACHE = tempfile.TemporaryDirectory(prefix="mcx-tests-")  # compiled once for the run, never the user's
 os.environ.setdefault("NUMBA_CACHE_DIR", CACHE.name)  # before anything imports numba
 
-settings.register_profile("repeatable", derandomize=True, deadline=None, max_examples=50, database=None)
-settings.register_profile("wide", deadline=None, max_examples=1000)
+ANY_SPEED = {"deadline": None, "suppress_health_check": [HealthCheck.too_slow]}  # no test depends on the clock
+settings.register_profile("repeatable", derandomize=True, max_examples=50, database=None, **ANY_SPEED)
+settings.register_profile("wide", max_examples=1000, **ANY_SPEED)
 settings.load_profile(os.environ.get("HYPOTHESIS_PROFILE", "repeatable"))
 
 

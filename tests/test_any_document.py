@@ -10,7 +10,7 @@ from pathlib import Path
 
 import pytest
 from front_door import EXAMPLES, PLACED, mcx
-from hypothesis import HealthCheck, given, settings
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 SMALL = ("european", "digital", "asian", "barrier", "cliquet", "touch", "reverse_convertible", "harbour_lantern",
@@ -29,8 +29,7 @@ SPICE = (
     b"fixings", b"quanto", b"dividends",
 )
 
-thoroughly = settings(suppress_health_check=[HealthCheck.function_scoped_fixture, HealthCheck.too_slow],
-                      max_examples=2 * settings.default.max_examples)
+thoroughly = settings(max_examples=2 * settings.default.max_examples)
 
 
 def hold(data: bytes, command: str = "price") -> None:

@@ -14,7 +14,7 @@ from types import MappingProxyType
 
 from mcx.checked.contract import BusinessDays, Contract, ContractOtherwise, DayRef, DayRule, Period, TermValue
 from mcx.checked.formula import Formula, Name, walk
-from mcx.checked.payoff import Assign, OtherReading, Pay, Payoff
+from mcx.checked.payoff import MONEY, MULTIPLES, Assign, OtherReading, Pay, Payoff
 from mcx.checked.read_payoff import read_payoff
 from mcx.checked.read_readings import with_start
 from mcx.checked.read_terms import read_terms
@@ -76,6 +76,7 @@ def read_contract(
     if payoff is None:
         check_keys(body, KEYS, REQUIRED, faults, "the contract", LATER)
         return None, faults + frame
+    _check_size(body, payoff, faults)
     reader = TermReader(payoff, assets, faults)
     values = reader.read(terms, body.place)
     textbook = _is_textbook(reader.written)
@@ -138,6 +139,14 @@ def _size(body: Mapping, faults: list[Fault]) -> dict[str, float]:
     elif not stated and not _is_meant(body, "notional", "units"):
         faults.append(Fault(body.place, f"{two} is missing in the contract"))
     return {key: read(body, key, amount, faults) for key in stated}
+
+
+def _check_size(body: Mapping, payoff: Payoff, faults: list[Fault]) -> None:
+    """Money per unit times a notional, or a multiple of the notional times a number of units, is no amount at all."""
+    wrong, right = {MONEY: ("notional", "units"), MULTIPLES: ("units", "notional")}.get(payoff.pays, ("", ""))
+    if wrong in body and right not in body:
+        text = f"'{payoff.name}' pays {payoff.pays}, which goes with '{right}', not with '{wrong}'"
+        faults.append(Fault(body.key(wrong).place, text))
 
 
 def _payoff(

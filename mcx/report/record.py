@@ -21,7 +21,7 @@ from mcx.text.documents import parse_documents
 from mcx.text.located import Document
 
 FORMAT = 1
-PACKAGES = ("mcx", "numpy", "numba", "llvmlite", "scipy", "pyyaml", "holidays")
+PACKAGES = ("mcx", "numpy", "numba", "llvmlite", "scipy", "pyyaml", "holidays", "python-dateutil")
 CHECKSUM = "sha256"
 CLOSE = 1e-12  # relative, on another type of processor
 # How long it took, how the number of paths was found, and what is worded: sentences change with versions.

@@ -379,3 +379,17 @@ def test_what_stands_there_already_is_not_offered():
     assert faults_of("  side: call", "  zzz: call") == [
         "c.yaml:11:3: 'side' is missing in the terms of 'sampler'",
         "c.yaml:18:3: 'zzz' is not a key of the terms of 'sampler'; expected 'side'"]
+
+
+def test_money_per_unit_takes_no_notional():
+    """A strike of 100 times a notional would be an amount of nothing; where the definition does not say what it pays
+    either is taken."""
+    money, multiples = (DEFINITION.replace("terms:", f"pays: {what}\nterms:", 1)
+                        for what in ("money per unit", "multiples of the notional"))
+    units = WHOLE.replace("notional: 1000000", "units: 10")
+    assert parsed(WHOLE, money)[1] == [
+        "c.yaml:3:1: 'sampler' pays money per unit, which goes with 'units', not with 'notional'"]
+    assert parsed(units, multiples)[1] == [
+        "c.yaml:3:1: 'sampler' pays multiples of the notional, which goes with 'notional', not with 'units'"]
+    for text, definition in ((units, money), (units, DEFINITION), (WHOLE, multiples), (WHOLE, DEFINITION)):
+        assert parsed(text, definition)[1] == []

@@ -196,6 +196,8 @@ def test_of_knows_the_contracts_assets():
     ("old", "new", "fault"),
     [
         ("about: A", "abuot: A", "2:1: 'abuot' is not a key of the payoff; did you mean 'about'?"),
+        ("about: A", "pays: money\nabout: A", "2:7: expected what its amounts are: 'money per unit' or 'multiples of the "
+                                             "notional', found 'money'"),
         ("payoff: memory_note", "payoff: Memory Note",
          "1:9: expected a name of lower-case letters, digits and '_', found 'Memory Note'"),
         ("{type: level}", "{typ: level}", "4:18: 'typ' is not a key of the term 'initial'; did you mean 'type'?"),

@@ -94,7 +94,7 @@ def exchange(c: dict) -> Terms:
 
 def on_extreme(c: dict) -> Terms:
     which = "best" if c["extreme"] == "max" else "worst"
-    return "rainbow_option", {"side": c["kind"], "which": which, "initial": 1, "strike": c["strike"]}
+    return "rainbow_option", {"side": c["kind"], "which": which, "initial": 1, "strike": percent(c["strike"])}
 
 
 def correlation_call(c: dict) -> Terms:
@@ -107,7 +107,8 @@ def two_asset_digital(c: dict) -> Terms:
 
 def basket_alike(c: dict) -> Terms:
     weights = ", ".join(f"{name}: {1 / c['assets']!r}" for name in names(c))
-    return "basket_option", {"side": c["kind"], "initial": 1, "weights": f"{{{weights}}}", "strike": c["strike"]}
+    return "basket_option", {"side": c["kind"], "initial": 1, "weights": f"{{{weights}}}",
+                             "strike": percent(c["strike"])}
 
 
 def forward_start(c: dict) -> Terms:

@@ -60,6 +60,16 @@ def test_probabilities_by_date(note: PriceResult, monkeypatch: pytest.MonkeyPatc
     assert "standard errors of at most 3.000 %" in shown(monkeypatch, show_price, result)
 
 
+def test_facts(note: PriceResult, monkeypatch: pytest.MonkeyPatch):
+    """The value in currency with its error, for how much; how many paths and why; the seed."""
+    result = replace(note, value=984_285.104, value_standard_error=2753.8, expected_life=1.81849,
+                     expected_life_standard_error=0.01)
+    words = " ".join(shown(monkeypatch, show_price, result).split())
+    assert "value 984,285.10 EUR for 1,000,000 EUR notional, standard error 2,753.80 standard error" in words
+    assert "paths 1,000 in " in words and "asked for: 1,000 paths" in words
+    assert f"seed {SEED}; variance reduction: none" in words and "expected life 1.818 years" in words
+
+
 def test_legs_with_a_sum(note: PriceResult, monkeypatch: pytest.MonkeyPatch):
     """Each leg with its own error, then the price; one leg alone needs no sum."""
     lines = shown(monkeypatch, show_price, note).splitlines()

@@ -46,7 +46,8 @@ def test_everything_a_price_depends_on_is_in_it(recorded: Path):
     assert [Path(each["file"]).name for each in record["inputs"]] == ["autocall.yaml", "autocall.yaml"]
     asked = [(each["paths"], each["seed"], each["reduction"]) for each in record["request"]]
     assert asked == [(1000, SEED, "none")] * 2
-    assert {"python", "numpy", "numba", "llvmlite", "holidays", "source", "processor"} <= record["environment"].keys()
+    assert {"python", "mcx", "numpy", "numba", "llvmlite", "holidays", "python-dateutil", "source",
+            "processor"} <= record["environment"].keys()
     assert all("holidays" in each["calendar_version"] for each in record["results"])
     table = package.price(TWO, paths=1000, seed=SEED).to_dict()
     for stored, found in zip(record["results"], table["prices"], strict=True):

@@ -75,5 +75,7 @@ def test_units_agree():
     for condition in result.conditions:
         assert all(each.probability <= condition.probability + 1e-15 for each in condition.dates)
         assert 0.0 <= condition.probability <= 1.0
+    for amount in (*result.legs, *result.parts):
+        assert amount.value == pytest.approx(amount.price * result.notional, rel=1e-15)
     low, high = result.interval95
     assert high - low == pytest.approx(2 * 1.959963984540054 * result.standard_error, rel=1e-12)
