@@ -156,7 +156,9 @@ def _with_assumptions(contract: Contract, market: Market) -> Contract:
     conversion, said = conversions(contract.conversion, contract.currency, contract.assets, market)
     if contract.units is not None and contract.currency not in market.funding:
         said = (*said, NO_FUNDING)
-    return replace(contract, conversion=conversion, assumptions=(*contract.assumptions, *said))
+    others = tuple(replace(other, contract=other.contract and replace(other.contract, conversion=conversion))
+                   for other in contract.otherwise)
+    return replace(contract, conversion=conversion, otherwise=others, assumptions=(*contract.assumptions, *said))
 
 
 def conversions_known(pair: Pair) -> list[Fault]:

@@ -16,7 +16,7 @@ from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Occasion, U
 from mcx.faults import Fault, Place
 from mcx.tape.builder import Builder
 from mcx.tape.formulas import Formulas, Scene, Unreadable, Values
-from mcx.tape.ledger import Ledger
+from mcx.tape.ledger import Ledger, Payment
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Instruction, Leaf, LeafKind, LevelKey, Output, Tape
@@ -66,7 +66,7 @@ def unroll(dated: DatedContract, *, nodes: Sequence[float], makeup: Makeup = PLA
     walk = _Walk(dated)
     walk.run()
     observed = drop_dead_code(walk.builder.tape(walk.ledger.outputs()))
-    faults = walk.faults or conflicts(observed) or _unknown_laws(observed, makeup)
+    faults = walk.faults or conflicts(observed) or unknown_laws(observed, makeup)
     if faults:
         return Unrolled(Tape((), ()), Tape((), ()), Grid((0.0,), ()), {}, (), tuple(sorted(set(faults))))
     observed, levels = _with_last_levels(observed, dated.contract.assets)
@@ -82,10 +82,34 @@ def last_read(dated: DatedContract) -> float:
     return max((step.payload.time for step in observed.instructions if isinstance(step.payload, LevelKey)), default=0.0)
 
 
-def _unknown_laws(tape: Tape, makeup: Makeup) -> list[Fault]:
+def unknown_laws(tape: Tape, makeup: Makeup) -> list[Fault]:
     """Continuous watches of an asset with cash dividends that is converted at the rate of the day."""
     return sorted({Fault(step.place, UNKNOWN_SUM) for step in tape.instructions
                    if step.op in (Op.LOW, Op.HIGH) and step.payload.asset in set(makeup.cash) & set(makeup.rates)})
+
+
+@dataclass(frozen=True, slots=True)
+class Walked:
+    """A contract on a tape that may hold others beside it, as values of that tape.
+
+    outputs   all named results but the levels, price first
+    payments  every amount that may be owed, in the order in which it is decided
+    ends      for each day on which the contract may end early, whether it does; at most one of them is true
+    """
+
+    outputs: tuple[Output, ...]
+    payments: tuple[Payment, ...]
+    ends: dict[Day, int]
+    faults: tuple[Fault, ...]
+
+
+def walked(dated: DatedContract, builder: Builder) -> Walked:
+    """A contract put on a tape under construction, still reading levels. Contracts that share a builder share what
+    they have in common; continuous watches are not checked against each other."""
+    walk = _Walk(dated, builder)
+    walk.run()
+    ledger = walk.ledger
+    return Walked(tuple(ledger.outputs()), tuple(ledger.payments), dict(ledger.ends), tuple(walk.faults))
 
 
 def _with_last_levels(tape: Tape, assets: Sequence[str]) -> tuple[Tape, dict[str, tuple[int, float]]]:
@@ -123,10 +147,10 @@ class _Branch:
 class _Walk:
     """The state of a contract while its dates are walked: alive flag, running values, ledger, faults."""
 
-    def __init__(self, dated: DatedContract):
+    def __init__(self, dated: DatedContract, builder: Builder | None = None):
         self.dated = dated
         payoff = dated.contract.payoff
-        self.builder = Builder()
+        self.builder = builder or Builder()
         self.formulas = Formulas(dated.contract, self.builder)
         self.ledger = Ledger.opened(self.builder, payoff)
         self.alive = self.builder.constant(1.0)
@@ -157,6 +181,8 @@ class _Walk:
             for update in moment.updates:
                 self._update(update)
             for number, event in enumerate(moment.events):
+                if self.builder.number(self.alive) == 0.0:  # what stands below it on this day is not reached
+                    break
                 try:
                     self._event(event, moment.events[: number + 1])
                 except Unreadable as trouble:
@@ -223,8 +249,8 @@ class _Walk:
         for action in actions:
             match action:
                 case Pay():
-                    due = dated.due[action]
-                    self._pay(action, self.formulas.one(action.amount, scene), due, flag)
+                    due, amount = dated.due[action], self.formulas.one(action.amount, scene)
+                    self._pay(action, Payment(action.leg, action.part, dated.event.place, day, due, flag, amount))
                     branch.due.append(due.time)
                 case Assign(values=pairs):
                     branch.values.update({name: self.formulas.read(value, scene) for name, value in pairs})
@@ -233,12 +259,11 @@ class _Walk:
                     break
         return branch
 
-    def _pay(self, pay: Pay, amount: int, due: Day, flag: int) -> None:
+    def _pay(self, pay: Pay, owed: Payment) -> None:
         emit = self.builder.emit
-        discount = self.builder.leaf(Leaf(LeafKind.DISCOUNT, end=due.time))
-        present = emit(Op.MUL, amount, discount, place=pay.place)
-        paid = emit(Op.SELECT, flag, present, self.builder.constant(0.0), place=pay.place)
-        self.ledger.pay(pay, paid, due)
+        discount = self.builder.leaf(Leaf(LeafKind.DISCOUNT, end=owed.due.time))
+        present = emit(Op.MUL, owed.amount, discount, place=pay.place)
+        self.ledger.pay(pay, emit(Op.SELECT, owed.flag, present, self.builder.constant(0.0), place=pay.place), owed)
 
     def _merge(self, condition: int, yes: dict[str, Values], no: dict[str, Values]) -> None:
         for name, value in yes.items():
