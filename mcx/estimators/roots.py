@@ -18,11 +18,12 @@ from mcx.estimators.batches import Sampling
 from mcx.estimators.estimate import Estimate
 from mcx.machine.run import Stream
 
-POINTS = 24  # steps of the scan
+POINTS = 16  # steps of the scan
 SCANNED = 1 << 16  # paths of the scan
-CLOSE = 1e-10  # of the range: where a solution is found well enough
+CLOSE, NEAR = 1e-10, 1e-4  # of the range: where a solution is found well enough, on all paths and on the first ones
+OF_ERROR = 3e-4  # or this share of its error: a price with jumps has no closer solution
 DOUBT = 4.0  # errors of the first paths within which a turn may cross 0 on all of them
-STEP = 1.0 / 400.0  # of the range: half the distance over which a slope is taken
+STEP = 1.0 / 100.0  # of the range: half the distance over which a slope is taken
 
 Distance = Callable[[float, Sampling], Estimate]  # price less target at a move
 
@@ -74,16 +75,16 @@ def solutions(
     and so is what it allows an interval."""
     low, high = (_edge(possible, end) for end in (low, high))
     first = _Points(distance, possible, replace(sampling, paths=min(sampling.paths, SCANNED)))
-    whole = _Points(distance, possible, sampling)
+    whole = _Points(distance, possible, sampling) if sampling.paths > SCANNED else first
     grid = np.unique([*np.linspace(low, high, POINTS + 1), 0.0])
     values = np.array([first(move) for move in grid])
     if np.ptp(values) == 0.0:
         return Solutions((), low, high, moves_price=False)
     found = []
     for left, right in _brackets(grid, values, first, whole):
-        move = _refined(left, right, first, whole, high - low)
-        if move is not None:
-            found.append(_solution(move, low, high, distance, whole))
+        root = _refined(left, right, first, whole, high - low)
+        if root is not None:
+            found.append(_solution(*root, distance, whole))
     return Solutions(tuple(found), low, high)
 
 
@@ -116,24 +117,36 @@ def _brackets(grid: np.ndarray, values: np.ndarray, at: _Points, whole: _Points)
                 yield float(turn.x), float(grid[number + 1])
 
 
-def _refined(left: float, right: float, first: _Points, whole: _Points, span: float) -> float | None:
-    """The solution on all paths in a stretch where the first ones have one; None where all paths have none."""
+def _refined(left: float, right: float, first: _Points, whole: _Points, span: float) -> tuple[float, float] | None:
+    """The solution on all paths in a stretch where the first ones have one, and the slope there on the first ones; None
+    where all paths have no solution. It is looked for within a few errors of the first paths' one, then further off."""
     ends = first(left), first(right)
-    near = brentq(first, left, right, xtol=1e-6 * span) if ends[0] * ends[1] < 0.0 else \
+    near = brentq(first, left, right, xtol=NEAR * span) if ends[0] * ends[1] < 0.0 else \
         left if ends[0] == 0.0 else right if ends[1] == 0.0 else 0.5 * (left + right)
-    reach, last = 2e-3 * span, False
+    slope = _slope(first, near, span)
+    reach = DOUBT * first.estimate(near).standard_error / abs(slope) if slope else span
+    reach, last = max(reach, 2.0 * NEAR * span), False
     while not last:
         a, b = max(near - reach, left), min(near + reach, right)
         if whole(a) * whole(b) <= 0.0:
-            return float(brentq(whole, a, b, xtol=CLOSE * span, rtol=1e-14)) if a < b else a
+            if a == b:
+                return a, slope
+            rise = abs(whole(b) - whole(a))
+            error = whole.estimate(a).standard_error * (b - a) / rise if rise else 0.0
+            move = float(brentq(whole, a, b, xtol=max(CLOSE * span, OF_ERROR * error), rtol=1e-14))
+            return move, _slope(first, move, span)
         last, reach = (a, b) == (left, right), 6.0 * reach
     return None
 
 
-def _solution(move: float, low: float, high: float, distance: Distance, whole: _Points) -> Solution:
-    step = STEP * (high - low)
-    up, down = min(move + step, high), max(move - step, low)
-    slope = (whole(up) - whole(down)) / (up - down)
+def _slope(at: _Points, move: float, span: float) -> float:
+    """The slope over a stretch that is long enough to smooth the steps of a price with jumps."""
+    up, down = (move + side * STEP * span for side in (1.0, -1.0))
+    up, down = (end if at.estimate(end) is not None else move for end in (up, down))
+    return (at(up) - at(down)) / (up - down) if up > down else 0.0
+
+
+def _solution(move: float, slope: float, distance: Distance, whole: _Points) -> Solution:
     here = whole.estimate(move)
     fresh = distance(move, replace(whole.sampling, stream=Stream.FRESH))
     both = math.hypot(here.standard_error, fresh.standard_error)

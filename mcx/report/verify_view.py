@@ -61,8 +61,7 @@ def show_verification(result: VerifyResult, page: Page) -> None:
             (each.input, each.asset, _move(each.half_width), scale.show(each.change, places),
              scale.show(each.standard_error, places), each.note) for each in result.inputs), words=2, last=1)
     page.heading("what would have to be true, each input alone")
-    page.table(("input", "", "value", "error", "move", "inside its doubt", "looked at"), map(_implied, result.implied),
-               words=2, last=2)
+    page.table(("input", "", "value", "error", "move", "inside its doubt"), map(_implied, result.implied), words=2, last=1)
     _joint(result, page)
     _readings(result, scale, places, page)
     _money(result, scale, places, page)
@@ -92,9 +91,8 @@ def _move(share: float) -> str:
 
 
 def _implied(each: ImpliedInput) -> tuple[str, ...]:
-    looked = f"{_signed(each.low)} to {_signed(each.high)}"
     if each.value is None:
-        return each.input, each.asset, "none", "", "", each.note, looked
+        return each.input, each.asset, "none", "", f"{_signed(each.low)} to {_signed(each.high)}", each.note
     if each.input in IN_PERCENT:
         error, number = 100.0 * each.standard_error, 100.0 * each.value
         sign = " %"
@@ -104,7 +102,7 @@ def _implied(each: ImpliedInput) -> tuple[str, ...]:
     value = f"{fixed(number, places)}{sign}" if each.measure == "level" else _signed(each.value, places)
     where = f"{value} at {each.tenor}" if each.tenor else value
     inside = {True: "yes", False: "no", None: "not stated"}[each.plausible]
-    return each.input, each.asset, where, f"{fixed(error, places)}{sign}", _signed(each.move, 2), inside, looked
+    return each.input, each.asset, where, f"{fixed(error, places)}{sign}", _signed(each.move, 2), inside
 
 
 def _signed(move: float, places: int = 1) -> str:
