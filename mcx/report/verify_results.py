@@ -12,6 +12,8 @@ from dataclasses import dataclass
 
 from mcx.report.results import Amount, Planned, Result
 
+NONE_THERE, NO_EFFECT = "none in the range", "the price does not depend on it"  # why there is no value
+
 
 @dataclass(frozen=True, slots=True)
 class QuoteSaid(Result):

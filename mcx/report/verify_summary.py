@@ -17,6 +17,8 @@ from mcx.report.cautions import assumptions, cautions, limits
 from mcx.report.results import Amount, Planned
 from mcx.report.summary import NO_REDUCTION
 from mcx.report.verify_results import (
+    NO_EFFECT,
+    NONE_THERE,
     BandLine,
     FootingLine,
     Gap,
@@ -142,7 +144,7 @@ def _implied(implied: Implied) -> Iterator[ImpliedInput]:
         yield ImpliedInput(lever.name, lever.subject, value, each.error * scale, implied.plausible(each), measure, each.move,
                            tenor, found.low, found.high, each.z, "")
     if not found.found:
-        note = "none in the range" if found.moves_price else "the price does not depend on it"
+        note = NONE_THERE if found.moves_price else NO_EFFECT
         yield ImpliedInput(lever.name, lever.subject, None, None, None, measure, None, tenor, found.low, found.high, None, note)
 
 
@@ -207,7 +209,7 @@ def _solved(solved: Solved) -> Iterator[SolvedTerm]:
     for each in found.found:
         yield line(each)
     if not found.found:
-        yield line(None, "none in the range" if found.moves_price else "the price does not depend on it")
+        yield line(None, NONE_THERE if found.moves_price else NO_EFFECT)
 
 
 def _warnings(found: Verification, market: Market) -> Iterator[str]:

@@ -6,9 +6,10 @@ from collections.abc import Iterator
 
 from mcx.report.price_view import Scale
 from mcx.report.terminal import Page, decimals, fixed
-from mcx.report.verify_results import ImpliedInput, SolvedTerm, VerifyResult, VerifyTable
+from mcx.report.verify_results import NO_EFFECT, NONE_THERE, ImpliedInput, SolvedTerm, VerifyResult, VerifyTable
 
 ANSWERS = {True: "yes", False: "no", None: ""}
+NO_NUMBER = {NONE_THERE: "", NO_EFFECT: "moves nothing"}
 MOST_PAYMENTS = 12  # listed one by one; more are in --json
 IN_PERCENT = ("vol", "yield", "rates", "funding", "correlation")
 
@@ -92,7 +93,7 @@ def _move(share: float) -> str:
 
 def _implied(each: ImpliedInput) -> tuple[str, ...]:
     if each.value is None:
-        return each.input, each.asset, "none", "", f"{_signed(each.low)} to {_signed(each.high)}", each.note
+        return each.input, each.asset, "none", "", f"{_signed(each.low)} to {_signed(each.high)}", NO_NUMBER[each.note]
     if each.input in IN_PERCENT:
         error, number = 100.0 * each.standard_error, 100.0 * each.value
         sign = " %"
