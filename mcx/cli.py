@@ -129,6 +129,24 @@ def greeks(files: tuple[str, ...], as_json: bool, ladder: bool, grid: bool, spot
 
 @cli.command()
 @FILES
+@click.option("--solve", default="", metavar="TERM", help="At which value of this term is the contract worth the quote?")
+@click.option("--target", metavar="PRICE", help="Solve for this price instead: 99.5%, or money per unit.")
+@sampling
+@AS_JSON
+@click.option("--record", type=click.Path(), help="Write a valuation record to this new file.")
+def verify(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
+    """Can the dealer's quote be right? The gap, what holds it, and what would have to be true."""
+    from mcx import api
+
+    with _progress() as (progress, notice):
+        result = api.verify(*files, progress=progress, notice=notice, **wishes)
+    _show(result, as_json, _verify_view)
+    if not result.explained:
+        sys.exit(NO)
+
+
+@cli.command()
+@FILES
 @click.option("--path", type=click.Path(), help="Levels (YAML or CSV) to run through the contract.")
 @click.option("--calendar", is_flag=True, help="Fixings, decisions and payments to come, of all contracts.")
 @AS_JSON
@@ -255,6 +273,13 @@ def _greeks_view(result: Result, page: Page) -> None:
         if number:
             page.line()
         show_greeks(each, page)
+
+
+def _verify_view(result: Result, page: Page) -> None:
+    from mcx.report.verify_results import VerifyTable
+    from mcx.report.verify_view import show_verification, show_verifications
+
+    (show_verifications if isinstance(result, VerifyTable) else show_verification)(result, page)
 
 
 def _readback_view(result: Result, page: Page) -> None:
