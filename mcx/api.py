@@ -432,6 +432,7 @@ def _verify(
     notice: Callable[[str], None] | None,
 ) -> list[VerifyResult]:
     """Every quote against its contract; the quotes of one contract share its paths."""
+    from mcx.estimators.finite import finite
     from mcx.estimators.verify import Bench
     from mcx.report.verify_summary import verify_result
 
