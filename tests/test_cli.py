@@ -100,7 +100,8 @@ def test_seconds(call: Path):
 
 @pytest.mark.parametrize(("options", "said"), [
     (("--paths", "1"), "one path has no error"), (("--paths", "0"), "'paths' is from 2"),
-    (("--paths", "many"), "not a valid integer"), (("--within", "2"), "ask for 'within' in bp or %"),
+    (("--paths", "many"), "not a valid integer"), (("--paths", "1.5e-1"), "not a valid integer"),
+    (("--paths", "1e99"), "'paths' is from 2"), (("--within", "2"), "ask for 'within' in bp or %"),
     (("--within", "nan"), "'within' is a half-width above 0"), (("--seconds", "nan"), "'seconds' is a time above 0"),
     (("--seconds", "-1"), "'seconds' is a time above 0"), (("--seed", "-1"), "'seed' is a whole number from 0"),
     (("--seed", str(2**64)), "'seed' is a whole number from 0"), (("--seed", "1.5"), "not a valid integer"),
