@@ -14,7 +14,7 @@ from mcx.estimators.estimate import Estimate, estimates
 from mcx.estimators.plan import FEWEST_PATHS, Plan, Precision, plan
 from mcx.faults import Fault
 from mcx.leaves.market_map import MarketMap
-from mcx.machine.run import BlockSums, Notice, Stream, run, values_by_path
+from mcx.machine.run import BlockSums, Notice, Stream, load_kernels, run, values_by_path
 from mcx.tape.program import Output, Program
 from mcx.tape.registers import lower
 from mcx.tape.unroll import Unrolled, unroll
@@ -96,13 +96,14 @@ def value(
 
     def seconds_for(paths: int) -> float:
         begun = time.perf_counter()
-        run(ready.program, paths=paths, stream=Stream.PILOT, notice=notice, **how)
+        run(ready.program, paths=paths, stream=Stream.PILOT, **how)
         return time.perf_counter() - begun
 
+    load_kernels(ready.program, notice)  # before any clock starts
     planned = plan(asked, prices, seconds_for, exact=price.outputs[0] < 0)
     begun = time.perf_counter()
     sums = run(ready.program, paths=planned.paths, snapshots=[planned.paths // share for share in SHARES],
-               progress=_counted(progress, planned), notice=notice, **how)
+               progress=_counted(progress, planned), **how)
     seconds = time.perf_counter() - begun
     if sums.paths < FEWEST_PATHS:
         raise KeyboardInterrupt
