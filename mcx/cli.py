@@ -240,6 +240,14 @@ def _complain(text: str) -> None:
     click.echo(text, err=True)
 
 
+def _tell_in_a_pipe(text: str) -> None:
+    """Half a minute of compiling is not worth a line there."""
+    from mcx.machine.run import COMPILING
+
+    if text != COMPILING:
+        _complain(text)
+
+
 def _as_json(result: Result) -> str:
     return json.dumps(result.to_dict(), indent=2, ensure_ascii=False, allow_nan=False)
 
@@ -297,9 +305,9 @@ def _replay_view(result: Result, page: Page) -> None:
 
 @contextmanager
 def _progress() -> Iterator[tuple[Callable | None, Callable | None]]:
-    """Callbacks that show progress on a terminal; none in a pipe."""
+    """Callbacks that show progress on a terminal; in a pipe no more than what takes very long is told."""
     if not sys.stderr.isatty():
-        yield None, None
+        yield None, _tell_in_a_pipe
         return
     from mcx.report.progress import Bar
 

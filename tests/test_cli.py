@@ -110,6 +110,7 @@ def test_seconds(call: Path):
     (("--paths", "100", "--within", "1bp"), "'paths' and 'within' cannot both decide"),
     (("--paths", "100", "--seconds", "1"), "'paths' and 'seconds' cannot both decide"),
     (("--within", "1bp", "--seconds", "1"), "'within' and 'seconds' cannot both decide"),
+    (("--within", "1e-9bp"), "'within 1e-9 bp' needs about"),
     (("--pats", "100"), "--pats"), (("--paths",), "'--paths' requires an argument"),
 ])
 def test_wrong_options(options: tuple, said: str):

@@ -11,6 +11,7 @@ import numpy as np
 from mcx.checked.market import Market
 from mcx.dates.dated_contract import DatedContract
 from mcx.estimators.estimate import Estimate, estimates
+from mcx.estimators.pace import announce, pace
 from mcx.estimators.plan import FEWEST_PATHS, Plan, Precision, plan
 from mcx.faults import Fault
 from mcx.leaves.market_map import MarketMap
@@ -83,8 +84,9 @@ def value(
 ) -> Valuation:
     """The value of a contract; `threads` None takes all, and changes no digit.
 
-    `notice` is told if kernels must be compiled first. Raises NonFinitePath (of `machine.run`) where a path gives no
-    finite number, and KeyboardInterrupt if that comes before there is an estimate.
+    `notice` is told if kernels must be compiled first, and of a run that will take long. Raises RequestError where the
+    precision asked for cannot be reached, NonFinitePath (of `machine.run`) where a path gives no finite number, and
+    KeyboardInterrupt if that comes before there is an estimate.
     """
     outputs = ready.unrolled.tape.outputs
     assert outputs[0].kind == "price", "the price is the first output"
@@ -100,7 +102,9 @@ def value(
         return time.perf_counter() - begun
 
     load_kernels(ready.program, notice)  # before any clock starts
-    planned = plan(asked, prices, seconds_for, exact=price.outputs[0] < 0)
+    speed = pace([ready.program], threads)
+    planned = plan(asked, prices, seconds_for, exact=price.outputs[0] < 0, pace=speed)
+    announce(planned.paths, speed, notice)
     begun = time.perf_counter()
     sums = run(ready.program, paths=planned.paths, snapshots=[planned.paths // share for share in SHARES],
                progress=_counted(progress, planned), **how)
