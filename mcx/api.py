@@ -54,7 +54,7 @@ def price(
     At most one of `paths`, `within` (a 95 % half-width: '2bp' or '0.02%' of the notional, '0.01' money per unit) and
     `seconds` decides the number of paths; without any it is 2^20. `seed` None is 1. `threads` None takes all; it
     changes no digit. `record` names a file to write a valuation record to. `notice` is called with a sentence when
-    kernels must be compiled. Raises InputError, RequestError, Refusal.
+    kernels must be compiled, or a run will take long. Raises InputError, RequestError, Refusal.
     """
     from mcx.estimators.plan import DEFAULT_SEED, check_fits, precision
 
