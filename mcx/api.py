@@ -8,8 +8,7 @@ after the documents are known to be sound.
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Iterable, Iterator, Sequence
-from contextlib import contextmanager
+from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -121,8 +120,9 @@ def greeks(
         for name in wish.assets:
             if name not in each.assets:
                 raise RequestError(f"'{each.title}' has no asset '{name}'{did_you_mean(name, each.assets)}")
-    table = _greeks(made, dated, [wish] * len(dated), [asked] * len(dated), [seed] * len(dated), threads, progress, notice)
-    if record is not None:
+    count = len(dated)
+    table = _greeks(made, dated, [wish] * count, [asked] * count, [seed] * count, threads, progress, notice)
+    if record is not None and not table.interrupted:
         from mcx.report.record import make_record, write_record
 
         write_record(record, make_record(_sources(made), [each.to_dict() for each in table.contracts], "greeks"))
@@ -217,13 +217,15 @@ def replay(
     if stored.get("verb", "price") == "greeks":
         from mcx.estimators.wishes import wish_of
 
-        wishes = [wish_of(*(each[key] for key in ("estimator", "bump", "assets", "spot_moves", "vol_moves"))) for each in runs]
-        results = _greeks(made, dated, wishes, asked, seeds, threads, progress, notice).contracts
+        keys = ("estimator", "bump", "assets", "spot_moves", "vol_moves")
+        wishes = [wish_of(*(each[key] for key in keys)) for each in runs]
+        table = _greeks(made, dated, wishes, asked, seeds, threads, progress, notice)
+        results = table.contracts
     else:
         table = _price(made, dated, asked, seeds, threads, progress, notice)
-        if table.interrupted:
-            raise KeyboardInterrupt
         results = table.prices
+    if table.interrupted:
+        raise KeyboardInterrupt
     return compare(stored, [each.to_dict() for each in results], environment())
 
 
@@ -304,6 +306,7 @@ def _price(
     notice: Callable[[str], None] | None,
 ) -> PriceTable:
     """Every contract valued; after an interruption those so far. Raises KeyboardInterrupt if that is none."""
+    from mcx.estimators.finite import finite
     from mcx.estimators.price import value
     from mcx.report.results import PriceTable
     from mcx.report.summary import price_result
@@ -311,7 +314,7 @@ def _price(
     results = []
     for ready, wish, seed in zip(_ready(made, dated), asked, seeds, strict=True):
         try:
-            with _finite(ready):
+            with finite(ready):
                 valuation = value(ready, wish, seed=seed, threads=threads, progress=progress, notice=notice)
         except KeyboardInterrupt:
             if not results:
@@ -333,35 +336,26 @@ def _greeks(
     progress: Progress | None,
     notice: Callable[[str], None] | None,
 ) -> GreeksTable:
-    """The sensitivities of every contract."""
+    """The sensitivities of every contract; after an interruption those so far."""
+    from mcx.estimators.finite import finite
     from mcx.estimators.greeks import sensitivities
     from mcx.report.greek_results import GreeksTable
     from mcx.report.greek_summary import greeks_result
 
     results = []
     for ready, wish, precision, seed in zip(_ready(made, dated), wishes, asked, seeds, strict=True):
-        with _finite(ready):
-            found = sensitivities(ready, made.market, wish, precision, seed=seed, threads=threads, progress=progress,
-                                  notice=notice)
+        try:
+            with finite(ready):
+                found = sensitivities(ready, made.market, wish, precision, seed=seed, threads=threads,
+                                      progress=progress, notice=notice)
+        except KeyboardInterrupt:
+            if not results:
+                raise
+            break
         results.append(greeks_result(ready, made.market, wish, found))
-    return GreeksTable(tuple(results))
-
-
-@contextmanager
-def _finite(ready: Ready) -> Iterator[None]:
-    """Turns a number that is not finite into a refusal that names the path."""
-    from mcx.machine.run import NonFinitePath, NonFiniteSum
-
-    why = "a formula divides by 0, overflows or leaves the domain of log, sqrt or a power"
-    try:
-        yield
-    except NonFinitePath as trouble:
-        output = ready.unrolled.tape.outputs[trouble.output if trouble.stream == 0 else 0].name
-        raise Refusal(f"'{ready.dated.contract.title}': '{output}' is not a finite number on path {trouble.path} (seed "
-                      f"{trouble.seed}, stream {trouble.stream}); {why}") from None
-    except NonFiniteSum as trouble:
-        raise Refusal(f"'{ready.dated.contract.title}': a derivative is not a finite number on one of the 64 paths from "
-                      f"{trouble.first_path} on (seed {trouble.seed}, stream {trouble.stream}); {why}") from None
+        if found.interrupted:
+            break
+    return GreeksTable(tuple(results), tuple(each.contract.title for each in dated[len(results):]))
 
 
 def _ready(made: Request, dated: Sequence[DatedContract]) -> list[Ready]:

@@ -132,7 +132,9 @@ SLIPS = {
                                "10.3876% is the least that '3y' can have"),
     "correlation out of range": ("65%, harbour/q", "165%, harbour/q",
                                  "44:32: expected a correlation from -100% to 100%, found '165%'"),
-    "no correlation": (", lantern/quarry: 50%", "", "44:14: no correlation for 'lantern/quarry'"),
+    "no correlation": (", lantern/quarry: 50%", "",
+                       "44:14: no correlation for 'lantern/quarry'; write 'lantern/quarry: NUMBER%' under "
+                       "'correlation'"),
     "negative vol": ("vol: 22%", "vol: -22%", "42:57: expected a vol above 0% and up to 300%, found '-22%'"),
     "negative spot": ("spot: 801.1", "spot: -801.1", "42:19: expected an amount above 0, found '-801.1'"),
     "not finite": ("spot: 801.1", "spot: .nan", "42:19: expected a finite number, found '.nan'"),

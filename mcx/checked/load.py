@@ -17,6 +17,7 @@ from mcx.checked.curves import valuation_of
 from mcx.checked.fixings import file_of
 from mcx.checked.library import Definitions, clashes, stands_for_shipped
 from mcx.checked.market import Market
+from mcx.checked.payoff import BOND, MULTIPLES
 from mcx.checked.read_contract import asset_names, read_contract
 from mcx.checked.read_market import read_market
 from mcx.checked.read_payoff import read_payoff
@@ -210,13 +211,21 @@ def rates_known(pair: Pair) -> list[Fault]:
 
 
 def funding_stated(pair: Pair) -> list[Fault]:
-    """A note's funding spread is stated, be it nil."""
+    """A note's funding spread is stated, be it nil: of what pays multiples of a notional, or has a bond in it."""
     currency, funding = pair.currency, pair.stated("funding")
-    if "notional" not in pair.contract_body or not currency or funding is None or currency in funding:
+    if not _is_note(pair) or not currency or funding is None or currency in funding:
         return []
     text = (f"no funding spread for '{currency}', the currency of the note '{pair.title}'; write "
             f"'funding: {{{currency}: 0 bp}}' to value it without the issuer's spread")
     return [Fault(_place(pair.market_body, "funding" if "funding" in pair.market_body else "market"), text)]
+
+
+def _is_note(pair: Pair) -> bool:
+    """Whether the contract's payments are promises of an issuer."""
+    if "notional" in pair.contract_body or pair.contract is None:
+        return "notional" in pair.contract_body
+    payoff = pair.contract.payoff
+    return payoff.pays == MULTIPLES or any(pay.part == BOND for pay in payoff.payments())
 
 
 def assets_known(pair: Pair) -> list[Fault]:
@@ -248,7 +257,10 @@ def correlations_known(pair: Pair) -> list[Fault]:
     place = _place(pair.market_body, "correlation" if "correlation" in pair.market_body else "market")
     missing = [f"{a}/{b}" for a, b in combinations(known, 2) if (a, b) not in stated and (b, a) not in stated]
     if missing:
-        return [Fault(place, f"no correlation for {listed(missing)}")]
+        lines = [f"{names}: NUMBER%" for names in missing]
+        line = f"{listed(lines)} under 'correlation'" if "correlation" in pair.market_body else \
+            f"'correlation: {{{', '.join(lines)}}}'"
+        return [Fault(place, f"no correlation for {listed(missing)}; write {line}")]
     quoted = pair.market.correlation | {names[::-1]: one for names, one in pair.market.correlation.items()}
     if len(known) < 3 or any(names not in quoted for names in combinations(known, 2)):
         return []

@@ -17,7 +17,7 @@ from mcx.checked.market import Curve, FxMarket, Market, Quoted
 from mcx.checked.read_underlyings import read_asset, read_fx
 from mcx.checked.reading import check_keys, mapping_of, text_of, value_of
 from mcx.checked.values import currency_code
-from mcx.faults import Fault, Place, did_you_mean
+from mcx.faults import Fault, Place, nearest
 from mcx.text.located import Document, Mapping, Node, Scalar
 from mcx.text.scalars import expected, percent
 
@@ -110,7 +110,7 @@ def _correlations(
             continue
         unknown = [name for name in names if name not in assets]
         for name in unknown:
-            faults.append(Fault(key.place, f"'{name}' is no asset of the market{did_you_mean(name, assets)}"))
+            faults.append(Fault(key.place, f"'{name}' is no asset of the market{_pair_meant(names, assets)}"))
         if names[0] == names[1] and not unknown:
             faults.append(expected("two different assets", key))
         elif names in found or names[::-1] in found:
@@ -119,6 +119,15 @@ def _correlations(
         elif quoted is not None:
             found[names] = quoted
     return found
+
+
+def _pair_meant(names: tuple[str, ...], assets: Iterable[str]) -> str:
+    """"; did you mean 'harbour/lantern'?" where each name is an asset or near one, else the empty string."""
+    meant: list[str] = []
+    for name, other in zip(names, names[::-1], strict=True):
+        others = (each for each in assets if each not in (other, *meant))
+        meant.append(name if name in assets else nearest(name, others))
+    return f"; did you mean '{'/'.join(meant)}'?" if all(meant) else ""
 
 
 def _uncertainty(reader: MarketReader, node: Node | None) -> dict[str, Quoted]:

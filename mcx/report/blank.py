@@ -27,7 +27,7 @@ WRITTEN = {
     "level": "in the asset's currency",
     "date": "as 2027-11-16",
     "dates": "as {from: 2027-02-16, until: 2029-11-16, every: 3 months}, or a list",
-    "watch": "a date, dates, or {continuous: [2026-12-01, 2027-12-01]}",
+    "watch": "a date, dates, another term's as observations.last, or {continuous: [2026-12-01, 2027-12-01]}",
     "flag": "true or false",
 }
 
