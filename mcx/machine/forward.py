@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from mcx.machine.bridges import bridge_range, corridor
 from mcx.machine.forms import Form
 from mcx.machine.jit import jit
 from mcx.machine.special import exp_row, log_row
@@ -24,8 +25,10 @@ def forward(registers, code, scalars, lanes):
             _arithmetic(form, y, registers, scalars, a, b, lanes)
         elif form < Form.STEP_RSR:
             _logic(form, y, registers, scalars, a, b, c, lanes)
-        else:
+        elif form < Form.CLEAR_EXPONENT_RRS:
             _model(form, y, registers, scalars, a, b, c, d, lanes)
+        else:
+            _watch(form, y, registers, scalars, a, b, c, d, lanes)
 
 
 @jit
@@ -193,3 +196,41 @@ def _model(form, y, registers, scalars, a, b, c, d, lanes):
         for i in range(lanes):
             move = x1[i] - x0[i]
             y[i] = 0.5 * (x0[i] + x1[i] + np.sqrt(move * move - 2.0 * variance * log[i]))
+
+
+@jit
+def _watch(form, y, registers, scalars, a, b, c, d, lanes):
+    if form == Form.CLEAR_EXPONENT_RRS:  # both sides of each `if` are computed: a branch would stop vectorisation
+        p, q, s = registers[a], registers[b], scalars[c]
+        for i in range(lanes):
+            exponent = s * p[i] * q[i]
+            y[i] = exponent if min(p[i], q[i]) > 0.0 else 0.0
+    elif form == Form.IMAGE_RRSS:
+        p, q, s, t = registers[a], registers[b], scalars[c], scalars[d]
+        for i in range(lanes):
+            y[i] = min((p[i] + s) * (q[i] + s) * t, 0.0)
+    elif form == Form.FAR_RRSS:
+        p, q, s, t = registers[a], registers[b], scalars[c], scalars[d]
+        for i in range(lanes):
+            y[i] = min(s + t * abs(p[i] - q[i]), 0.0)
+    elif form == Form.INSIDE_RRRS:
+        x, p, q, s = registers[a], registers[b], registers[c], scalars[d]
+        for i in range(lanes):
+            chance = max(x[i], 0.0)
+            y[i] = chance if (min(p[i], q[i]) > 0.0) & (max(p[i], q[i]) < s) else 0.0
+    elif form == Form.BRIDGE_CLEAR_RRR:
+        p, q, v = registers[a], registers[b], registers[c]
+        for i in range(lanes):
+            y[i] = -np.expm1(-2.0 * p[i] * q[i] / v[i]) if min(p[i], q[i]) > 0.0 else 0.0
+    elif form == Form.BRIDGE_CORRIDOR_RRRR:
+        p, q, w, v = registers[a], registers[b], registers[c], registers[d]
+        for i in range(lanes):
+            y[i] = corridor(p[i], q[i], w[i], v[i])
+    elif form == Form.BRIDGE_RANGE_RRRR:
+        p, q, v, u = registers[a], registers[b], registers[c], registers[d]
+        for i in range(lanes):
+            y[i] = bridge_range(p[i], q[i], v[i], u[i])
+    elif form == Form.LOOKUP_RSS:
+        x, last = registers[a], c - b
+        for i in range(lanes):
+            y[i] = scalars[b + (int(min(x[i], 1.0 * last)) if x[i] >= 1.0 else 0)]

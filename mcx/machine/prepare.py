@@ -12,11 +12,14 @@ from dataclasses import dataclass
 import numpy as np
 
 from mcx.machine.forms import FORMS, Form, kinds
+from mcx.tape.bridges import IMAGES, LONG_STEP
 from mcx.tape.ops import OPS, Op
 from mcx.tape.program import Program
 
 WIDTH = 6  # form, destination, up to four operands
 _WHOLE_POWERS = range(-8, 9)  # x ** n by multiplications
+_TABLE = 3  # operands of a LOOKUP: what it counts, its first entry and its last
+LEAST_EXPONENT = 40.0  # exp(-40) is lost beside 1
 
 
 @dataclass(frozen=True, slots=True)
@@ -56,7 +59,7 @@ def prepare(program: Program) -> KernelCode:
 def _join_drifts(program: Program) -> Iterator[tuple[Op | Form, int, tuple[int, ...]]]:
     """The instructions, with x + m and the step that alone reads it made one: the step then loads x once."""
     lines = [
-        (Op(op), destination, tuple(operands[: OPS[Op(op)].arity]))
+        (Op(op), destination, tuple(operands[: _TABLE if op == Op.LOOKUP else OPS[Op(op)].arity]))
         for op, destination, *operands in program.code.tolist()
     ]
     once = _read_once(lines, program.outputs.tolist())
@@ -149,8 +152,44 @@ class _Writer:
                     self.emit(Form.MUL_RR, product, variance, log)
                     variance, log = self.constant(1.0), product
                 self.choose(op, to, x0, x1, variance, log)
+            case Op.BRIDGE_CLEAR, d0, d1, variance if variance < 0:
+                exponent, chance = self.scratch(), self.scratch()
+                rate = self.constant(-2.0 / self.scalars[-1 - variance] if self.scalars[-1 - variance] else -np.inf)
+                self.emit(Form.CLEAR_EXPONENT_RRS, exponent, self.row(d0), self.row(d1), rate)
+                self.emit(Form.EXP_R, chance, exponent)
+                self.emit(Form.SUB_SR, to, self.constant(1.0), chance)
+            case Op.BRIDGE_CORRIDOR, d0, d1, width, variance if width < 0 and variance < 0:
+                self.corridor(to, d0, d1, width, self.scalars[-1 - variance])
             case _:
                 self.choose(op, to, *sources)
+
+    def corridor(self, to: int, d0: int, d1: int, width: int, variance: float) -> None:
+        """The images of `tape.bridges.bridge_corridor` in vector loops, as many as count for this step; where the
+        step is long for its width, or one of them is no usual number, lane by lane."""
+        w = self.scalars[-1 - width]
+        usual = np.isfinite(w) and w > 0.0 and variance > 0.0
+        if not usual or variance / (w * w) > LONG_STEP:
+            return self.choose(Op.BRIDGE_CORRIDOR, to, d0, d1, width, self.constant(variance))
+        d0, d1 = self.row(d0), self.row(d1)
+        exponent, image, other, total = (self.scratch() for _ in range(4))
+        reach, rate = 2.0 * w * w / variance, -2.0 / variance
+        terms = [(Form.IMAGE_RRSS, n * w, rate) for n in sorted(range(-IMAGES, IMAGES + 1), key=abs)
+                 if min(n * n, (n + 1) ** 2) * reach < LEAST_EXPONENT]
+        terms += [(Form.FAR_RRSS, -n * n * reach, sign * n * reach / w) for n in range(1, IMAGES + 1)
+                  for sign in (1, -1) if (n * n - n * (sign > 0)) * reach < LEAST_EXPONENT]
+        for number, (form, s, t) in enumerate(terms):
+            self.emit(form, exponent, d0, d1, self.constant(s), self.constant(t))
+            self.emit(Form.EXP_R, image, exponent)
+            if number == 0:
+                self.emit(Form.SUB_SR, total, self.constant(1.0), image)
+                continue
+            self.emit(Form.ADD_RR if form is Form.FAR_RRSS else Form.SUB_RR, other, total, image)
+            total, other = other, total
+        self.emit(Form.INSIDE_RRRS, to, total, d0, d1, width)
+
+    def row(self, source: int) -> int:
+        """The row of an operand; a scalar is filled into one."""
+        return source if source >= 0 else self.filled(source)
 
     def power(self, to: int, x: int, exponent: int) -> None:
         """x ** exponent by multiplications."""

@@ -26,6 +26,10 @@ _DEAR = {
     Form.POW_RR: 15.0,
     Form.BRIDGE_LOW_RRSR: 0.8,
     Form.BRIDGE_HIGH_RRSR: 0.8,
+    Form.BRIDGE_CLEAR_RRR: 6.0,
+    Form.BRIDGE_CORRIDOR_RRRR: 90.0,
+    Form.BRIDGE_RANGE_RRRR: 900.0,
+    Form.LOOKUP_RSS: 1.0,
 }
 _BY_FORM = np.array([_DEAR.get(form, _USUAL) for form in Form])
 

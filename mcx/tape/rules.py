@@ -2,7 +2,7 @@
 
 A table over the closed list in `ops.py`, keyed by `Op`; every other meaning (adjoint, kernel) is another column or
 another table over the same list. The interpreter, constant folding and the tests read this one; the kernel is tested
-against it. Inputs (arity 0) have no rule: their values come from outside.
+against it. Inputs, and what is replaced before a tape runs, have no rule.
 """
 
 from __future__ import annotations
@@ -12,6 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from mcx.tape.bridges import bridge_clear, bridge_corridor, bridge_range, lookup
 from mcx.tape.ops import Op
 
 Value = np.ndarray | np.float64 | float
@@ -69,6 +70,10 @@ RULES: dict[Op, Rule] = {
     Op.STEP: Rule(lambda x, s, z: x + s * z),
     Op.BRIDGE_LOW: Rule(bridge_low),
     Op.BRIDGE_HIGH: Rule(bridge_high),
+    Op.BRIDGE_CLEAR: Rule(bridge_clear),
+    Op.BRIDGE_CORRIDOR: Rule(bridge_corridor),
+    Op.BRIDGE_RANGE: Rule(bridge_range),
+    Op.LOOKUP: Rule(lookup),
 }
 
 

@@ -10,7 +10,9 @@ import numpy as np
 import pytest
 from made_programs import on_rows, program
 
+from mcx.tape.bridges import bridge_corridor, bridge_range, range_below
 from mcx.tape.ops import OPS, Op
+from mcx.tape.rules import RULES
 
 NAN, INF = np.nan, np.inf
 
@@ -44,6 +46,9 @@ PLAIN: dict[Op, Callable[..., np.ndarray]] = {
     Op.STEP: lambda x, s, z: x + s * z,
     Op.BRIDGE_LOW: bridge(-1.0),
     Op.BRIDGE_HIGH: bridge(1.0),
+    Op.BRIDGE_CLEAR: lambda d0, d1, v: np.where((d0 > 0) & (d1 > 0), 1.0 - np.exp(-2.0 * d0 * d1 / v), 0.0),
+    Op.BRIDGE_CORRIDOR: bridge_corridor,
+    Op.BRIDGE_RANGE: bridge_range,
 }
 SPECIAL = (0.0, -0.0, 1.0, -1.0, 2.0, 0.5, NAN, INF, -INF, 1e-310, 1e300, -3.0)
 
@@ -56,6 +61,15 @@ def operand_rows(op: Op) -> np.ndarray:
     if op in (Op.BRIDGE_LOW, Op.BRIDGE_HIGH):
         rows[2], rows[3] = np.abs(rows[2]), rng.uniform(0.0, 1.0, 64)
         rows[2, :8] = 0.0  # no variance: the ends themselves
+    elif op in (Op.BRIDGE_CLEAR, Op.BRIDGE_CORRIDOR, Op.BRIDGE_RANGE):
+        rows[2:] = np.abs(rows[2:]) + 0.1
+        rows[2 if op is Op.BRIDGE_RANGE else OPS[op].arity - 1, :4] = 0.0  # no variance
+        if op is Op.BRIDGE_CORRIDOR:
+            rows[:2, 32:] = np.abs(rows[:2, 32:]) * 0.3
+            rows[3, 16:] *= 10.0 ** rng.uniform(-2.0, 1.0, 48)  # short steps and long ones
+            rows[2, 60:] = INF, INF, -1.0, 1e-3
+        elif op is Op.BRIDGE_RANGE:
+            rows[:2], rows[3] = np.abs(rows[:2]), rng.uniform(0.0, 1.0, 64)
     elif op is Op.POW:
         rows[0] = np.abs(rows[0])
     else:
@@ -74,12 +88,15 @@ def check(op: Op, found: np.ndarray, expected: np.ndarray) -> None:
     """Operations of one rounding agree to the last bit, the others to a few units."""
     exact = op not in (Op.EXP, Op.LOG, Op.POW, Op.STEP, Op.BRIDGE_LOW, Op.BRIDGE_HIGH)
     scale = 0.0 if exact else 1e-15
+    if op >= Op.BRIDGE_CLEAR:
+        rtol = 1e-9 if op is Op.BRIDGE_RANGE else 0.0
+        return np.testing.assert_allclose(found, expected, rtol=rtol, atol=1e-14)
     np.testing.assert_allclose(found, expected, rtol=0.0 if exact else 1e-14, atol=scale)
 
 
 def test_every_operation_has_a_plain_meaning_here():
     """No operation of the kernel is left out of these tests."""
-    assert set(PLAIN) == {op for op in Op if op >= Op.ADD}
+    assert set(PLAIN) == set(RULES) - {Op.LOOKUP}
 
 
 @pytest.mark.parametrize("op", PLAIN, ids=lambda op: op.name)
@@ -163,3 +180,20 @@ def test_long_program_against_numpy():
         rows[to] = np.clip(value, -4.0, 4.0)
     made = program(lines, rows=6, outputs=range(6), scalars=[*scalars, 4.0, -4.0])
     np.testing.assert_allclose(on_rows(made, start), rows, rtol=1e-9, atol=1e-9)
+
+
+def test_lookup_counts_entries():
+    """The whole part of x counts the entries, which stand one behind the other; beyond them the first or the last."""
+    x = np.resize([-3.0, -0.5, 0.0, 0.9, 1.0, 1.7, 2.0, 2.5, 9.0, 1e300, -1e300], 64)[None]
+    made = program([(Op.LOOKUP, 1, 0, -2, -4)], rows=2, outputs=[1], scalars=[7.0, 10.0, 20.0, 30.0, 8.0])
+    expected = np.array([10.0, 20.0, 30.0])[np.clip(np.floor(x[0]), 0, 2).astype(int)]
+    np.testing.assert_array_equal(on_rows(made, x)[0], expected)
+
+
+def test_drawn_ranges_are_the_quantiles_of_their_law():
+    """What is drawn for u has the probability u below it, from 1e-9 to almost 1, whatever the ends."""
+    rng = np.random.default_rng(552913047)
+    rows = np.array([rng.exponential(size=64), rng.exponential(size=64), 10.0 ** rng.uniform(-9.0, -1e-9, 64)])
+    made = program([(Op.BRIDGE_RANGE, 3, 0, 1, -1, 2)], rows=4, outputs=[3], scalars=[0.7])
+    found = range_below(on_rows(made, rows)[0], rows[0], rows[1], 0.7)
+    np.testing.assert_allclose(found, rows[2], rtol=1e-6, atol=1e-12)

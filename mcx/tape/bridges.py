@@ -1,0 +1,96 @@
+"""Laws of a Brownian bridge against one barrier and between two, as NumPy functions.
+
+Everything is said in distances: `d0` and `d1` from a barrier (or from the minimum) to the bridge at the start and at
+the end of a step, `width` from the lower to the upper barrier, `variance` of the step. A distance of 0 or less means
+that the barrier is reached.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+Value = np.ndarray | np.float64 | float
+
+LONG_STEP = 0.6  # variance over width squared: up to here images, beyond it the sine series
+SINES, IMAGES = 5, 4  # terms on either side; what is left out is below 1e-17 at LONG_STEP
+HALVINGS = 80
+NARROWEST = 0.3  # deviations: a range below this has a probability below 1e-22
+LEAST_ENDS = 1e-5  # deviations: with both ends closer to the minimum than this the law's terms all but cancel
+
+
+def bridge_clear(d0: Value, d1: Value, variance: Value) -> Value:
+    """The probability that a bridge does not reach a barrier: 1 - exp(-2 d0 d1 / variance).
+
+    Glasserman (2003), "Monte Carlo Methods in Financial Engineering", section 6.4.
+    """
+    clear = np.minimum(d0, d1) > 0.0
+    return np.where(clear, -np.expm1(-2.0 * d0 * d1 / variance), 0.0)[()]
+
+
+def bridge_corridor(d0: Value, d1: Value, width: Value, variance: Value) -> Value:
+    """The probability that a bridge reaches neither of two barriers; d0 and d1 are counted from the lower one.
+
+    The transition density between two absorbing barriers over the free one, as a series of images or, where the step
+    is long, of sines (Feller 1971, "An Introduction to Probability Theory and Its Applications" II, section X.5).
+    Both are exact to 1e-14 where they are used.
+    """
+    d0, d1, width, variance = np.broadcast_arrays(*(np.asarray(x, dtype=float) for x in (d0, d1, width, variance)))
+    inside = (np.minimum(d0, d1) > 0.0) & (np.maximum(d0, d1) < width)
+    spread = variance / (width * width)
+    chance = np.where(spread <= LONG_STEP, _images(d0, d1, width, variance), _sines(d0, d1, width, spread))
+    one_side = np.where(np.isinf(width), bridge_clear(d0, d1, variance), np.where(variance == 0.0, 1.0, chance))
+    return np.where(inside, np.maximum(one_side, 0.0), 0.0)[()]
+
+
+def _images(d0: np.ndarray, d1: np.ndarray, width: np.ndarray, variance: np.ndarray) -> np.ndarray:
+    total = 0.0
+    for n in range(-IMAGES, IMAGES + 1):
+        shift = n * width
+        total = total + np.exp(-2.0 * shift * (shift + d1 - d0) / variance)
+        total = total - np.exp(-2.0 * (shift + d0) * (shift + d1) / variance)
+    return total
+
+
+def _sines(d0: np.ndarray, d1: np.ndarray, width: np.ndarray, spread: np.ndarray) -> np.ndarray:
+    a, b = np.pi * d0 / width, np.pi * d1 / width
+    free = ((d1 - d0) / width) ** 2 / (2.0 * spread)
+    total = sum(np.sin(k * a) * np.sin(k * b) * np.exp(free - 0.5 * spread * (np.pi * k) ** 2)
+                for k in range(1, SINES + 1))
+    return 2.0 * np.sqrt(2.0 * np.pi * spread) * total
+
+
+def range_below(width: Value, d0: Value, d1: Value, variance: Value) -> Value:
+    """The probability that the maximum of a bridge is less than `width` above its minimum, given the minimum, from
+    which d0 and d1 are counted: the corridor's probability derived by the lower barrier, over the same without an
+    upper one."""
+    total, both = 1.0, d0 + d1
+    for n in range(1, 4 * IMAGES):
+        for m in (n, -n):
+            shift = m * width
+            total = total + (m + 1) * (2.0 * shift + both) / both * np.exp(-2.0 * shift * (shift + both) / variance)
+            exponent = shift * (shift + d1 - d0) - d0 * d1
+            total = total - m * (2.0 * shift + d1 - d0) / both * np.exp(-2.0 * exponent / variance)
+    return total
+
+
+def bridge_range(d0: Value, d1: Value, variance: Value, u: Value) -> Value:
+    """Maximum less minimum of a bridge whose ends lie d0 and d1 above its minimum, drawn by inversion of the law that
+    `range_below` gives; u in (0, 1)."""
+    deviation = np.sqrt(variance)
+    d0 = np.maximum(d0, 0.0)
+    d1 = np.maximum(d1, np.maximum(LEAST_ENDS * deviation - d0, 0.0))
+    low = np.where(np.equal(variance, 0.0), np.maximum(d0, d1), np.maximum(np.maximum(d0, d1), NARROWEST * deviation))
+    high = low + 8.0 * deviation
+    low = np.broadcast_to(low, np.broadcast(low, high, u).shape)
+    least = low
+    for _ in range(HALVINGS):
+        middle = 0.5 * (low + high)
+        under = range_below(middle, d0, d1, variance) < u
+        low, high = np.where(under, middle, low), np.where(under, high, middle)
+    return np.where(np.equal(variance, 0.0), least, 0.5 * (low + high))[()]
+
+
+def lookup(x: Value, *entries: Value) -> Value:
+    """The entry that the whole part of x counts, from 0; the first or the last where x lies outside."""
+    number, *columns = np.broadcast_arrays(np.clip(np.nan_to_num(np.floor(x)), 0, len(entries) - 1), *entries)
+    return np.take_along_axis(np.stack(columns), number[None].astype(np.int64), axis=0)[0][()]
