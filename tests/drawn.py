@@ -15,7 +15,7 @@ from reference import Reference, Result
 from mcx.machine.run import draws
 from mcx.tape.ops import Op
 
-SIDES = {Op.BRIDGE_LOW: "low", Op.BRIDGE_HIGH: "high"}
+SIDES = {Op.BRIDGE_LOW: "low", Op.BRIDGE_HIGH: "high", Op.BRIDGE_RANGE: "high"}
 
 
 def uniform_dimensions(ready: Ready) -> dict[tuple[int, int, str], int]:

@@ -6,9 +6,12 @@ total variance interpolates linearly and goes on at the last vol. Nothing here i
 
 from __future__ import annotations
 
+import cmath
 import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+
+from scipy.optimize import brentq
 
 from mcx.checked.contract import Contract
 from mcx.checked.market import Curve, Market
@@ -122,3 +125,26 @@ def bridge_low(x0: float, x1: float, variance: float, uniform: float) -> float:
 def bridge_high(x0: float, x1: float, variance: float, uniform: float) -> float:
     """The maximum: the minimum of the bridge turned upside down."""
     return -bridge_low(-x0, -x1, variance, uniform)
+
+
+def within(x0: complex, x1: complex, low: complex, high: complex, variance: float) -> complex:
+    """The probability that a bridge stays between two barriers: its images in both of them (Feller 1971, II, X.5)."""
+    total, width = 0.0, high - low
+    for n in range(-12, 13):
+        total += cmath.exp(((x1 - x0) ** 2 - (x1 - x0 + 2 * n * width) ** 2) / (2 * variance))
+        total -= cmath.exp(((x1 - x0) ** 2 - (x1 + x0 - 2 * low + 2 * n * width) ** 2) / (2 * variance))
+    return total
+
+
+def bridge_high_given_low(x0: float, x1: float, variance: float, low: float, uniform: float) -> float:
+    """The maximum of a bridge whose minimum is known: the derivative of `within` by the lower barrier, taken along the
+    imaginary axis (Squire & Trapp 1998), over that without an upper barrier, set equal to the uniform."""
+    if variance == 0.0:
+        return max(x0, x1)
+    density = 2.0 * (x0 + x1 - 2.0 * low) / variance * math.exp(-2.0 * (x0 - low) * (x1 - low) / variance)
+
+    def miss(high: float) -> float:
+        return -within(x0, x1, low + 1e-30j, high, variance).imag / 1e-30 / density - uniform
+
+    least = max(x0, x1, low + 0.35 * math.sqrt(variance))
+    return brentq(miss, least, least + 9.0 * math.sqrt(variance), xtol=1e-14) if miss(least) < 0.0 else least

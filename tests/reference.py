@@ -13,7 +13,7 @@ import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 
-from plain_market import PlainMarket, bridge_high, bridge_low
+from plain_market import PlainMarket, bridge_high, bridge_high_given_low, bridge_low
 
 from mcx.checked import formula as trees
 from mcx.checked.contract import Figures, Word
@@ -321,12 +321,15 @@ class Reference:
         for asset, drift, row in zip(self.assets, numbers.drifts, numbers.factor, strict=True):
             after[asset] += drift + sum(weight * normal(step, k) for k, weight in enumerate(row) if weight)
         low, high = list(after), list(after)
-        for asset, side in sorted(self.watched_in(step)):
-            ends = (before[asset], after[asset], variances[asset], uniform(step, asset, side))
+        watched = self.watched_in(step)
+        for asset, side in sorted(watched, key=lambda one: (one[0], one[1] == "high")):  # the minimum before the maximum
+            ends, drawn = (before[asset], after[asset], variances[asset]), uniform(step, asset, side)
             if side == "low":
-                low[asset] = bridge_low(*ends)
+                low[asset] = bridge_low(*ends, drawn)
+            elif (asset, "low") in watched:
+                high[asset] = bridge_high_given_low(*ends, low[asset], drawn)
             else:
-                high[asset] = bridge_high(*ends)
+                high[asset] = bridge_high(*ends, drawn)
         return tuple(map(math.exp, after)), plain([*map(math.exp, low)]), plain([*map(math.exp, high)])
 
     def watched_in(self, step: int) -> set[tuple[int, str]]:

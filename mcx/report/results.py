@@ -205,7 +205,8 @@ class DateLine(Result):
 
 @dataclass(frozen=True, slots=True)
 class WatchLine(Result):
-    """How something is watched. `law`: 'exact', 'refused' or 'unread' (nothing depends on it)."""
+    """How something is watched. `law`: 'exact', 'bracketed' (several assets: between two bounds), 'refused' or 'unread'
+    (nothing depends on it)."""
 
     name: str
     when: str

@@ -31,7 +31,7 @@ from mcx.dates.dated_contract import Occasion
 from mcx.faults import Fault, Place
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
-from mcx.tape.program import Leaf, LeafKind
+from mcx.tape.program import Leaf, LeafKind, Tape
 from mcx.tape.rules import evaluate
 
 Values: TypeAlias = tuple[int, ...]
@@ -154,7 +154,7 @@ class Formulas:
                 self._fixed[value] = figure(self.contract, step.payload)
             else:
                 operands = [self.fixed(operand) for operand in step.operands]
-                known = operands and None not in operands
+                known = operands and None not in operands and step.payload is None
                 self._fixed[value] = float(evaluate(step.op, *operands)) if known else None
         return self._fixed[value]
 
@@ -261,6 +261,21 @@ class Formulas:
                 values.append(self.builder.emit(second, chosen, other, place=formula.place))
                 chosen = self.builder.emit(first, chosen, other, place=formula.place)
         return chosen
+
+
+def fixed_values(tape: Tape, contract: Contract) -> list[float | None]:
+    """For each value of a tape the number that it is in this contract whatever the market, or None."""
+    known: list[float | None] = []
+    for step in tape.instructions:
+        if step.op is Op.CONSTANT:
+            known.append(step.payload)
+        elif step.op is Op.LEAF and step.payload.kind is LeafKind.TERM:
+            known.append(figure(contract, step.payload))
+        else:
+            operands = [known[k] for k in step.operands]
+            computed = operands and None not in operands and step.payload is None
+            known.append(float(evaluate(step.op, *operands)) if computed else None)
+    return known
 
 
 def figure(contract: Contract, leaf: Leaf) -> float:

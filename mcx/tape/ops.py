@@ -104,5 +104,5 @@ OPS: dict[Op, OpRow] = {
     Op.BRIDGE_CLEAR: OpRow(3, "bridge_clear({0}, {1}, variance {2})"),
     Op.BRIDGE_CORRIDOR: OpRow(4, "bridge_corridor({0}, {1}, width {2}, variance {3})"),
     Op.BRIDGE_RANGE: OpRow(4, "bridge_range({0}, {1}, variance {2}, {3})"),
-    Op.LOOKUP: OpRow(ANY, "lookup({0})"),
+    Op.LOOKUP: OpRow(ANY, "lookup"),
 }

@@ -12,7 +12,7 @@ from enum import Enum
 import numpy as np
 
 from mcx.faults import Place
-from mcx.tape.ops import OPS, Op
+from mcx.tape.ops import ANY, OPS, Op
 
 
 class LeafKind(Enum):
@@ -64,13 +64,47 @@ class LevelKey:
 
 
 @dataclass(frozen=True, slots=True)
+class Barrier:
+    """A side of an asset that is watched over a stretch: LOW or HIGH, and the key of the extreme."""
+
+    op: Op
+    key: LevelKey
+
+    @property
+    def order(self) -> tuple:
+        return self.key.start, self.key.time, self.key.asset, self.op
+
+
+class Bound(Enum):
+    """Which number stands for the chance that no barrier of several assets is reached within a step, of which only
+    the assets' own chances are known: M. Frechet's bounds (1951), or the chance itself where one asset is watched."""
+
+    EXACT = "exact"
+    LOWER = "lower"  # max(0, sum of the chances - (assets - 1))
+    UPPER = "upper"  # the smallest of the chances
+
+
+@dataclass(frozen=True, slots=True)
+class Unhit:
+    """What an UNHIT is about: barriers, each at the level that the operand in its place gives."""
+
+    barriers: tuple[Barrier, ...]
+    bound: Bound
+
+    def __str__(self) -> str:
+        shown = [f"{one.op.name.lower()} {one.key}" for one in self.barriers]
+        return f"{', '.join(shown)} ({self.bound.value})"
+
+
+@dataclass(frozen=True, slots=True)
 class Instruction:
-    """One operation. `payload` is the number of a CONSTANT, the Leaf of a LEAF, the LevelKey of LEVEL, LOW and HIGH,
-    the dimension of NORMAL and UNIFORM; `place` is the line of the contract or payoff it came from, where known."""
+    """One operation. `payload` is the number of a CONSTANT, the Leaf of a LEAF, the LevelKey of LEVEL, LOW, HIGH and
+    MOMENT, the Unhit of an UNHIT, the dimension of NORMAL and UNIFORM; `place` is the line of the contract or payoff
+    it came from, where known."""
 
     op: Op
     operands: tuple[int, ...] = ()
-    payload: float | Leaf | LevelKey | int | None = None
+    payload: float | Leaf | LevelKey | Unhit | int | None = None
     place: Place | None = None
 
 
@@ -78,7 +112,8 @@ class Instruction:
 class Output:
     """A named result of the tape. `flag` outputs are 0 or 1 on each path.
 
-    `kind` is price, leg, part, condition, end, life or level; `subject` the leg's, part's, event's or asset's name;
+    `kind` is price, leg, part, condition, end, life, level, or gap: by how much the upper bound of the output that
+    `subject` names lies above the lower one. Else `subject` is the leg's, part's, event's or asset's name;
     `day` the date or span of dates that a condition or an end is about ('' for all dates). The name is made of them.
     """
 
@@ -117,6 +152,8 @@ class Tape:
         lines = []
         for number, step in enumerate(self.instructions):
             shown = OPS[step.op].form.format(*(f"v{k}" for k in step.operands))
+            if OPS[step.op].arity == ANY:
+                shown += f" of {', '.join(f'v{k}' for k in step.operands)}"
             if step.payload is not None:
                 shown += f" {step.payload}"
             lines.append(f"v{number} = {shown}")

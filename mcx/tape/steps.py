@@ -1,13 +1,14 @@
 """Levels become steps: the model's part of the tape.
 
-The contract's tape reads levels at dates, and lowest and highest levels over watched stretches. Here each becomes a
-walk of the logs over one common grid. Dates that nothing reads are no grid dates, so unobserved steps are merged; a
-watched stretch is split at every node of a curve inside it, because the law of a bridge's extreme needs drift per unit
-of variance to be constant within a step.
+The contract's tape reads levels at dates, lowest and highest levels over watched stretches, and chances that barriers
+are not reached. Here each becomes a walk of the logs over one common grid. Dates that nothing reads are no grid dates,
+so unobserved steps are merged; a watched stretch is split at every node of a curve inside it, because the law of a
+bridge's extreme needs drift per unit of variance to be constant within a step.
 """
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
@@ -15,9 +16,10 @@ from mcx.faults import Place
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
-from mcx.tape.program import Leaf, LeafKind, LevelKey, Tape
+from mcx.tape.program import Bound, Leaf, LeafKind, LevelKey, Tape, Unhit
 
 SAME_TIME = 1e-9  # years: about 0.03 s; dates closer than that are one date, written in two ways
+CLOSEST = 1e-12  # of a log to a level: nearer than this the law of the moment has no finite numbers
 
 
 @dataclass(frozen=True, slots=True)
@@ -28,26 +30,32 @@ class Grid:
     assets: tuple[int, ...]
 
 
-def expand_levels(tape: Tape, nodes: Sequence[float]) -> tuple[Tape, Grid]:
-    """The tape with every LEVEL, LOW and HIGH made of normals and uniforms, without dead code, and its grid.
+def expand_levels(tape: Tape, nodes: Sequence[float], pieces: int = 1) -> tuple[Tape, Grid]:
+    """The tape with every LEVEL, LOW, HIGH, UNHIT and MOMENT made of normals and uniforms, without dead code, and its
+    grid.
 
     Normals are numbered step by step, within a step by asset; asset i moves by its drift and by the normals of the
     assets up to itself times the lower-triangular factor of the step's covariance. `nodes` are the times of the
-    market's curve points.
+    market's curve points. Where barriers of several assets are watched together, what they span is refined to at
+    least that many `pieces`.
     """
-    walk = _Walk(tape, nodes)
+    walk = _Walk(tape, nodes, pieces)
     values: list[int] = []
     for step in tape.instructions:
         if step.op is Op.LEVEL:
             values.append(walk.level(step.payload, step.place))
         elif step.op in (Op.LOW, Op.HIGH):
             values.append(walk.extreme(step.op, step.payload, step.place))
+        elif step.op is Op.UNHIT:
+            values.append(walk.unhit(step.payload, [values[k] for k in step.operands]))
+        elif step.op is Op.MOMENT:
+            values.append(walk.moment(step.payload, values[step.operands[0]]))
         else:
             values.append(walk.builder.copy(step, tuple(values[k] for k in step.operands)))
     outputs = [output.at(values[output.value]) for output in tape.outputs]
     grid = Grid(tuple(walk.times), tuple(walk.assets))
-    steps = len(grid.times) - 1
-    return drop_dead_code(walk.builder.tape(outputs, steps * len(grid.assets), walk.uniforms)), grid
+    normals = (len(grid.times) - 1) * len(grid.assets) + (walk.pair is not None)
+    return drop_dead_code(walk.builder.tape(outputs, normals, walk.uniforms)), grid
 
 
 def grid_times(read: Iterable[LevelKey], watched: Iterable[LevelKey], nodes: Iterable[float]) -> list[float]:
@@ -67,20 +75,40 @@ def grid_times(read: Iterable[LevelKey], watched: Iterable[LevelKey], nodes: Ite
     return sorted({*times, *inside})
 
 
+def refined(times: Sequence[float], stretches: Sequence[tuple[float, float]], pieces: int) -> list[float]:
+    """The times with every step inside one of the stretches cut into equal parts, none longer than what the
+    stretches span over `pieces`."""
+    if pieces == 1 or not stretches:
+        return list(times)
+    span = max(end for _, end in stretches) - min(start for start, _ in stretches)
+    found = list(times[:1])
+    for start, end in zip(times, times[1:]):
+        inside = any(first < end and start < last for first, last in stretches)
+        parts = math.ceil((end - start) / span * pieces - SAME_TIME) if inside else 1
+        found += [start + (end - start) * k / parts for k in range(1, parts)] + [end]
+    return found
+
+
 class _Walk:
     """The logs of the assets, moved along the grid as the tape asks for later and later dates."""
 
-    def __init__(self, tape: Tape, nodes: Sequence[float]):
+    def __init__(self, tape: Tape, nodes: Sequence[float], pieces: int):
         levels = [step.payload for step in tape.instructions if step.op is Op.LEVEL]
         extremes = {(step.op, step.payload): None for step in tape.instructions if step.op in (Op.LOW, Op.HIGH)}
-        self.times = grid_times(levels, (key for _, key in extremes), nodes)
+        chances = [step.payload for step in tape.instructions if step.op is Op.UNHIT]
+        watched = {key for _, key in extremes} | {one.key for chance in chances for one in chance.barriers}
+        watched |= {step.payload for step in tape.instructions if step.op is Op.MOMENT}
+        together = {one.key for chance in chances if chance.bound is not Bound.EXACT for one in chance.barriers}
+        self.times = refined(grid_times(levels, watched, nodes), [(key.start, key.time) for key in together], pieces)
         self._number = {time: number for number, time in enumerate(self.times)}
-        self.assets = sorted({key.asset for key in levels if self.number(key.time)} | {k.asset for _, k in extremes})
+        self.assets = sorted({key.asset for key in levels if self.number(key.time)} | {key.asset for key in watched})
         self.builder = Builder()
         self.uniforms = 0
         self.reached = 0
         self.logs: dict[tuple[int, int], int] = {}  # (asset, grid number) -> log level
         self.extremes: dict[tuple[Op, LevelKey], int | None] = extremes
+        self._unhit: dict[tuple, int] = {}
+        self.pair: tuple[int, int] | None = None  # the square of a normal and a uniform, for the moments of hits
         self.covering: list[list[tuple[Op, LevelKey]]] = [[] for _ in self.times]  # by the step's end
         for op, key in extremes:
             for number in range(self.number(key.start) + 1, self.number(key.time) + 1):
@@ -116,9 +144,9 @@ class _Walk:
             for row, asset in enumerate(self.assets):
                 self._move(row, asset)
             drawn: dict[tuple[Op, int], int] = {}
-            for op, key in self.covering[self.reached]:
+            for op, key in sorted(self.covering[self.reached], key=lambda one: one[0]):  # each minimum before its maximum
                 if (op, key.asset) not in drawn:
-                    drawn[op, key.asset] = self._bridge(op, key.asset)
+                    drawn[op, key.asset] = self._bridge(op, key.asset, drawn.get((Op.LOW, key.asset)))
                 self._join(op, key, drawn[op, key.asset])
 
     def _span(self) -> dict[str, float]:
@@ -134,16 +162,94 @@ class _Walk:
             log = emit(Op.STEP, log, factor, self.builder.input(Op.NORMAL, dimension))
         self.logs[asset, self.reached] = log
 
-    def _bridge(self, op: Op, asset: int) -> int:
-        """The extreme of this step, one uniform for all who watch this side of the asset."""
+    def _bridge(self, op: Op, asset: int, low: int | None) -> int:
+        """The extreme of this step, one uniform for all who watch this side of the asset; a maximum whose minimum is
+        drawn already follows from the law of the range."""
+        emit = self.builder.emit
         uniform = self.builder.input(Op.UNIFORM, self.uniforms)
         self.uniforms += 1
         variance = self.builder.leaf(Leaf(LeafKind.VARIANCE, asset, **self._span()))
         ends = self.log(asset, self.reached - 1), self.log(asset, self.reached)
-        bridge = Op.BRIDGE_LOW if op is Op.LOW else Op.BRIDGE_HIGH
-        return self.builder.emit(bridge, *ends, variance, uniform)
+        if low is None:
+            return emit(Op.BRIDGE_LOW if op is Op.LOW else Op.BRIDGE_HIGH, *ends, variance, uniform)
+        return emit(Op.ADD, low, emit(Op.BRIDGE_RANGE, *(emit(Op.SUB, end, low) for end in ends), variance, uniform))
 
     def _join(self, op: Op, key: LevelKey, drawn: int) -> None:
         before = self.extremes[op, key]
         joined = Op.MIN if op is Op.LOW else Op.MAX
         self.extremes[op, key] = drawn if before is None else self.builder.emit(joined, before, drawn)
+
+    def unhit(self, chance: Unhit, levels: Sequence[int]) -> int:
+        """The chance that no barrier is reached, given the levels on the grid: step by step."""
+        active: dict[int, list[tuple[Op, int, int]]] = {}  # by the step's end: op, asset, level
+        for one, level in zip(chance.barriers, levels, strict=True):
+            for number in range(self.number(one.key.start) + 1, self.number(one.key.time) + 1):
+                active.setdefault(number, []).append((one.op, one.key.asset, level))
+        self.advance(max(active))
+        factors = [self._step_unhit(number, tuple(dict.fromkeys(active[number])), chance.bound)
+                   for number in sorted(active)]
+        return self.builder.fold(Op.MUL, factors)
+
+    def _step_unhit(self, number: int, barriers: tuple[tuple[Op, int, int], ...], bound: Bound) -> int:
+        key = (number, barriers, bound)
+        if key not in self._unhit:
+            emit, fold = self.builder.emit, self.builder.fold
+            assets = sorted({asset for _, asset, _ in barriers})
+            parts = [self._asset_unhit(number, asset, barriers) for asset in assets]
+            if bound is not Bound.LOWER:
+                found = fold(Op.MIN, parts)
+            elif len(parts) > 1:
+                found = emit(Op.SUB, fold(Op.ADD, parts), self.builder.constant(len(parts) - 1.0))
+                found = emit(Op.MAX, found, self.builder.constant(0.0))
+            else:
+                found = parts[0]
+            self._unhit[key] = found
+        return self._unhit[key]
+
+    def _asset_unhit(self, number: int, asset: int, barriers: Sequence[tuple[Op, int, int]]) -> int:
+        """The chance that one asset reaches neither its nearest barrier below nor its nearest above in a step."""
+        emit, fold = self.builder.emit, self.builder.fold
+        lows, highs = ([level for op, other, level in barriers if other == asset and op is side]
+                       for side in (Op.LOW, Op.HIGH))
+        span = {"start": self.times[number - 1], "end": self.times[number]}
+        variance = self.builder.leaf(Leaf(LeafKind.VARIANCE, asset, **span))
+        ends = [self.log(asset, number - 1), self.log(asset, number)]
+        if not highs:
+            low = emit(Op.LOG, fold(Op.MAX, lows))
+            return emit(Op.BRIDGE_CLEAR, *(emit(Op.SUB, end, low) for end in ends), variance)
+        high = emit(Op.LOG, fold(Op.MIN, highs))
+        if not lows:
+            return emit(Op.BRIDGE_CLEAR, *(emit(Op.SUB, high, end) for end in ends), variance)
+        low = emit(Op.LOG, fold(Op.MAX, lows))
+        distances = (emit(Op.SUB, end, low) for end in ends)
+        return emit(Op.BRIDGE_CORRIDOR, *distances, emit(Op.SUB, high, low), variance)
+
+    def moment(self, key: LevelKey, level: int) -> int:
+        """Which part of the step that ends at a key's time has passed when the level is reached first, given that it
+        is. With T the step and t the moment, t / (T - t) is inverse Gaussian (in the clock of variance) with the mean
+        d0 / d1 and the shape d0^2 / variance, d0 and d1 the distances of the ends from the level; drawn by the method
+        of Michael, Schucany and Haas, "Generating random variates using transformations with multiple roots" (1976).
+
+        One pair of draws serves all steps of the tape: what is paid at a hit is a sum over steps, of which each has
+        the right law.
+        """
+        emit, constant, number = self.builder.emit, self.builder.constant, self.number(key.time)
+        self.advance(number)
+        assert self.number(key.start) == number - 1, "the stretch of a moment is one step"
+        if self.pair is None:
+            normal = self.builder.input(Op.NORMAL, (len(self.times) - 1) * len(self.assets))
+            self.pair = emit(Op.MUL, normal, normal), self.builder.input(Op.UNIFORM, self.uniforms)
+            self.uniforms += 1
+        square, uniform = self.pair
+        one, log = constant(1.0), emit(Op.LOG, level)
+        d0, d1 = (emit(Op.MAX, emit(Op.ABS, emit(Op.SUB, self.log(key.asset, end), log)), constant(CLOSEST))
+                  for end in (number - 1, number))
+        variance = self.builder.leaf(Leaf(LeafKind.VARIANCE, key.asset, start=key.start, end=key.time))
+        mean = emit(Op.DIV, d0, d1)
+        half = emit(Op.DIV, emit(Op.MUL, square, emit(Op.MUL, variance, constant(0.5))), emit(Op.MUL, d0, d1))
+        root = emit(Op.SQRT, emit(Op.MUL, half, emit(Op.ADD, half, constant(2.0))))
+        part = emit(Op.DIV, one, emit(Op.ADD, emit(Op.ADD, half, one), root))  # the smaller root over the mean
+        ratio = emit(Op.SELECT, emit(Op.LE, emit(Op.MUL, uniform, emit(Op.ADD, one, part)), one), part,
+                     emit(Op.DIV, one, part))
+        odds = emit(Op.MUL, mean, ratio)
+        return emit(Op.DIV, odds, emit(Op.ADD, odds, one))

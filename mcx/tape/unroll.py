@@ -15,7 +15,7 @@ from mcx.checked.payoff import Action, Assign, End, Event, Pay, Running
 from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Occasion, Update
 from mcx.faults import Fault, Place
 from mcx.tape.builder import Builder
-from mcx.tape.formulas import Formulas, Scene, Unreadable, Values
+from mcx.tape.formulas import Formulas, Scene, Unreadable, Values, fixed_values
 from mcx.tape.ledger import Ledger
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
@@ -23,19 +23,21 @@ from mcx.tape.program import Instruction, Leaf, LeafKind, LevelKey, Output, Tape
 from mcx.tape.running import Observed, Watched
 from mcx.tape.steps import Grid, expand_levels
 from mcx.tape.watching import conflicts
+from mcx.tape.weights import Weighted, weigh
 
 
 @dataclass(frozen=True, slots=True)
 class WatchNote:
-    """How a continuously watched running value enters: by which extreme of which asset, and by which law.
+    """How a continuously watched running value enters: by which extremes of which assets, and by which law.
 
-    `side` is 'low', 'high' or '' where nothing reads it; `law` is 'exact' or 'unread'.
+    `sides` are (asset, 'low' or 'high'), empty where nothing reads it; `law` is 'exact', 'bracketed' or 'unread';
+    `drawn` whether extremes are drawn instead of entering by their chances.
     """
 
     name: str
-    asset: str
-    side: str
+    sides: tuple[tuple[str, str], ...]
     law: str
+    drawn: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -43,6 +45,7 @@ class Unrolled:
     """A contract as a tape. With faults the tapes are empty.
 
     tape      reads normals and uniforms only: ready for `lower`
+    bracketed whether outputs are the middle between two bounds, as far apart as their 'gap' outputs say
     observed  the same contract still reading LEVEL, LOW and HIGH: its meaning on given levels
     grid      the simulated times and assets
     levels    for each 'level' output, by its name, the asset's number and the time: its mean is the forward
@@ -54,19 +57,33 @@ class Unrolled:
     levels: dict[str, tuple[int, float]]
     watches: tuple[WatchNote, ...]
     faults: tuple[Fault, ...] = ()
+    bracketed: bool = False
 
 
-def unroll(dated: DatedContract, *, nodes: Sequence[float]) -> Unrolled:
-    """The tape of a contract; `nodes` are the times of the market's curve points (`MarketMap.nodes`)."""
-    walk = _Walk(dated)
+def unroll(
+    dated: DatedContract, *, nodes: Sequence[float], pieces: int = 1, everything_drawn: bool = False
+) -> Unrolled:
+    """The tape of a contract; `nodes` are the times of the market's curve points (`MarketMap.nodes`).
+
+    `pieces` refines the steps in which several assets are watched together; `everything_drawn` makes flags of
+    continuous watches draws on each path where they could be probabilities.
+    """
+    walk = _Walk(dated, nodes)
     walk.run()
     observed = drop_dead_code(walk.builder.tape(walk.ledger.outputs()))
-    faults = walk.faults or conflicts(observed)
-    if faults:
-        return Unrolled(Tape((), ()), Tape((), ()), Grid((0.0,), ()), {}, (), tuple(sorted(set(faults))))
+    if walk.faults:
+        return _refused(walk.faults)
     observed, levels = _with_last_levels(observed, dated.contract.assets)
-    tape, grid = expand_levels(observed, nodes)
-    return Unrolled(tape, observed, grid, levels, walk.notes())
+    weighted = weigh(observed, fixed_values(observed, dated.contract), everything_drawn)
+    faults = conflicts(weighted.tape)
+    if faults:
+        return _refused(faults)
+    tape, grid = expand_levels(weighted.tape, nodes, pieces)
+    return Unrolled(tape, observed, grid, levels, walk.notes(weighted), (), bool(weighted.bracketed))
+
+
+def _refused(faults: Iterable[Fault]) -> Unrolled:
+    return Unrolled(Tape((), ()), Tape((), ()), Grid((0.0,), ()), {}, (), tuple(sorted(set(faults))))
 
 
 def _with_last_levels(tape: Tape, assets: Sequence[str]) -> tuple[Tape, dict[str, tuple[int, float]]]:
@@ -104,7 +121,7 @@ class _Branch:
 class _Walk:
     """The state of a contract while its dates are walked: alive flag, running values, ledger, faults."""
 
-    def __init__(self, dated: DatedContract):
+    def __init__(self, dated: DatedContract, nodes: Sequence[float] = ()):
         self.dated = dated
         payoff = dated.contract.payoff
         self.builder = Builder()
@@ -143,15 +160,14 @@ class _Walk:
                 except Unreadable as trouble:
                     self.faults.append(trouble.fault)
 
-    def notes(self) -> tuple[WatchNote, ...]:
-        names = self.dated.contract.assets
-        return tuple(
-            WatchNote(name, names[state.side.asset], state.side.level_op.name.lower(), "exact")
-            if state.side
-            else WatchNote(name, "", "", "unread")
-            for name, state in self.observed.items()
-            if isinstance(state, Watched)
-        )
+    def notes(self, weighted: Weighted) -> tuple[WatchNote, ...]:
+        names, found = self.dated.contract.assets, []
+        for name, state in self.observed.items():
+            if isinstance(state, Watched):
+                sides = dict.fromkeys((names[one.key.asset], one.op.name.lower()) for one in state.barriers)
+                law = "bracketed" if weighted.bracketed & set(state.barriers) else "exact" if sides else "unread"
+                found.append(WatchNote(name, tuple(sides), law, bool(weighted.drawn & set(state.barriers))))
+        return tuple(found)
 
     def _start(self, formula: Formula | None) -> Values | None:
         """The value of `start:`, of terms and numbers only."""
