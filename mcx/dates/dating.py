@@ -15,7 +15,7 @@ from mcx.checked.contract import Contract, DayList, DayRef, Figures, Stretch
 from mcx.checked.payoff import At, Continuous, Event, Pay, Running
 from mcx.checked.term_values import DATED_TYPES
 from mcx.dates.business_days import GoodDays, NotCovered, good_days
-from mcx.dates.dated_contract import Day, DatedContract, DatedEvent, Moment, Occasion, Update, Watch
+from mcx.dates.dated_contract import Day, DatedContract, DatedEvent, DatedHit, Moment, Occasion, Update, Watch
 from mcx.dates.day_counts import YEAR_FRACTIONS
 from mcx.dates.readable import readings
 from mcx.dates.rules import TermDays, part_of
@@ -87,6 +87,7 @@ class _Dating:
         self.updates: dict[Day, list[Update]] = {}
         self.events: dict[Day, list[DatedEvent]] = {}
         self.watches: list[Watch] = []
+        self.hits: list[DatedHit] = []
 
     def dated(self) -> tuple[DatedContract | None, list[Fault]]:
         self._refuse_dates_before_start()
@@ -95,7 +96,7 @@ class _Dating:
         for event in self.payoff.events:
             self._happen(event)
         days = sorted({*self.updates, *self.events}, key=lambda day: day.time)
-        if not days and not self.faults:
+        if not days and not self.hits and not self.faults:
             self._fault(self.contract.place, "nothing is ever observed or paid: no event has a date")
         if self.faults:
             return None, self.faults
@@ -104,7 +105,7 @@ class _Dating:
             moments=tuple(Moment(day, tuple(self.updates.get(day, ())), tuple(self.events.get(day, ())))
                           for day in days),
             watches=tuple(self.watches), calendar_version=self.good.version if self.good else "",
-            assumptions=(*self.contract.assumptions, *dict.fromkeys(self.assumptions)))
+            assumptions=(*self.contract.assumptions, *dict.fromkeys(self.assumptions)), hits=tuple(self.hits))
         live, faults = readings(dated)
         return (None if faults else _only(dated, live)), faults
 
@@ -164,10 +165,16 @@ class _Dating:
 
     def _happen(self, event: Event) -> None:
         """The days of an event, and of every payment in it."""
-        if event.at.part == "once":
-            self._fault(event.at.place, "'once' needs the moment of a hit, which a later version reads")
-            return
-        occasions = self._occasions(event.at, event.since, event.until)
+        at = event.at
+        if at.part == "once":
+            watch = next((watch for watch in self.watches if watch.running.name == at.name), None)
+            if watch is not None:
+                self._hit(event, watch)
+                return
+            at = next(running.at for running in self.payoff.running if running.name == at.name)
+            if isinstance(at, Continuous):  # one of its dates is not stated
+                return
+        occasions = self._occasions(at, event.since, event.until)
         if not occasions and event.at.name in self.schedules:
             dates = f"'{event.at.name}.{event.at.part}'" if event.at.part else f"'{event.at.name}'"
             dates += f" from '{event.since}'" if event.since else ""
@@ -177,6 +184,36 @@ class _Dating:
         for occasion in occasions:
             due = {pay: self._due(pay, occasion) for pay in pays}
             self.events.setdefault(occasion.day, []).append(DatedEvent(event, occasion, due))
+
+    def _hit(self, event: Event, watch: Watch) -> None:
+        """What happens at the moment of a hit, with every day on which it may come and when its amounts are paid."""
+        pays = [action for action in (*event.then, *event.otherwise) if isinstance(action, Pay)]
+        if self.contract.textbook:
+            fixed = {pay: self.schedules[pay.due][:1] for pay in pays if pay.due in self.schedules}
+            for pay, (due,) in fixed.items():
+                self._refuse_before(pay, watch.end, due)
+            self.hits.append(DatedHit(event, watch, (), fixed))
+            return
+        length = (watch.end.date - watch.start.date).days
+        days = tuple(self.terms.day(watch.start.date + datetime.timedelta(days=k)) for k in range(length + 1))
+        due = {}
+        for pay in pays:
+            if pay.due == "same day":
+                due[pay] = days
+            elif pay.due in self.schedules:
+                self._refuse_before(pay, watch.end, self.schedules[pay.due][0])
+                due[pay] = self.schedules[pay.due][:1] * len(days)
+            else:
+                due[pay] = tuple(self._after_lag(day) for day in days)
+        self.hits.append(DatedHit(event, watch, days, due))
+        if pays:
+            self.assumptions.append(f"a hit of '{watch.running.name}' counts for the calendar day on which it comes; a day "
+                                    f"runs from one close to the next, weekends and holidays included")
+
+    def _refuse_before(self, pay: Pay, day: Day, due: Day) -> None:
+        if due.time < day.time:
+            self._fault(self.contract.terms[pay.due].place,
+                        f"the payment of what is watched until {day} falls due before, on {due}")
 
     def _occasions(self, at: At, since: str = "", until: str = "") -> list[Occasion]:
         """The dates of a schedule, or the part of them that is meant, numbered as in the whole schedule."""

@@ -107,6 +107,9 @@ class _Walk:
         for watch in self.dated.watches:
             self._look(watch.running, None)
             self._read(watch.running.formula)
+        for hit in self.dated.hits:
+            day = hit.watch.end
+            self._happen(DatedEvent(hit.event, Occasion(day, "", 1, 1, math.nan, day.time, {}), {}))
         for moment in self.dated.moments:
             for update in moment.updates:
                 self._begin_watches(moment.day.time, self.order[update.running.name])
@@ -133,6 +136,9 @@ class _Walk:
         """Reads an event; True if it ends the contract on every path."""
         event = dated_event.event
         self._look(event, dated_event.occasion)
+        once = event.at.part == "once"
+        if once:
+            self.owner.running.add(event.at.name)
         holds = self._read(event.condition) if event.condition is not None else 1.0
         fresh = self._memory(*_formulas(event))
         taken = [*event.then] if holds is None or holds else []
@@ -147,7 +153,7 @@ class _Walk:
             else:
                 break
         self.remembered |= fresh
-        return bool(holds) and any(isinstance(action, End) for action in event.then)
+        return bool(holds) and not once and any(isinstance(action, End) for action in event.then)
 
     def _read(self, formula: Formula) -> float | None:
         """Reads a formula; its value where that is the same on every path and for every asset, else None."""

@@ -41,10 +41,11 @@ class MarketMap:
         drifts = [market.rates[asset.currency or contract.currency] for asset in self._quotes]
         drifts += [asset.dividend_yield for asset in self._quotes] + [asset.forwards for asset in self._quotes]
         drifts += [asset.vol for asset in self._quotes]
+        drifts += [market.rates[contract.currency], market.funding.get(contract.currency)]  # for amounts paid at a hit
         self._nodes = sorted({node.time for curve in drifts if curve for node in curve.nodes if node.time > 0.0})
 
     def nodes(self) -> tuple[float, ...]:
-        """The times at which a drift or a vol of one of the contract's assets changes, in years."""
+        """The times at which a drift or a vol of one of the contract's assets or its discounting changes, in years."""
         return tuple(self._nodes)
 
     def forward(self, asset: str, time: float) -> float:
