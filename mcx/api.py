@@ -143,7 +143,9 @@ def replay(
     dated = _all_dated(made, faults)
     runs = stored["request"]
     asked = [precision(each["paths"], None, None) for each in runs]
-    table = _price(made, dated, asked, [each["seed"] for each in runs], threads, progress, notice)
+    brackets = [each.get("bracket") for each in stored["results"]]
+    table = _price(made, dated, asked, [each["seed"] for each in runs], threads, progress, notice,
+                   [bracket and bracket["pieces"] for bracket in brackets])
     if table.interrupted:
         raise KeyboardInterrupt
     return compare(stored, [each.to_dict() for each in table.prices], environment())
@@ -184,17 +186,21 @@ def _price(
     threads: int | None,
     progress: Progress | None,
     notice: Callable[[str], None] | None,
+    pieces: Sequence[int | None] | None = None,
 ) -> PriceTable:
-    """Every contract valued; after an interruption those so far."""
+    """Every contract valued; after an interruption those so far. `pieces` prescribe how fine the steps are where a price
+    lies between bounds."""
     from mcx.estimators.price import value
     from mcx.machine.run import NonFinitePath
     from mcx.report.results import PriceTable
     from mcx.report.summary import price_result
 
     results = []
-    for ready, wish, seed in zip(_ready(made, dated), asked, seeds, strict=True):
+    pieces = pieces or [None] * len(dated)
+    for ready, wish, seed, number in zip(_ready(made, dated), asked, seeds, pieces, strict=True):
         try:
-            valuation = value(ready, wish, seed=seed, threads=threads, progress=progress, notice=notice)
+            ready, valuation = value(ready, wish, seed=seed, threads=threads, pieces=number, progress=progress,
+                                     notice=notice)
         except NonFinitePath as trouble:
             output = ready.unrolled.tape.outputs[trouble.output if trouble.stream == 0 else 0].name
             raise Refusal(f"'{ready.dated.contract.title}': '{output}' is not a finite number on path {trouble.path} "

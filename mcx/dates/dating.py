@@ -106,8 +106,8 @@ class _Dating:
                           for day in days),
             watches=tuple(self.watches), calendar_version=self.good.version if self.good else "",
             assumptions=(*self.contract.assumptions, *dict.fromkeys(self.assumptions)), hits=tuple(self.hits))
-        live, faults = readings(dated)
-        return (None if faults else _only(dated, live)), faults
+        live, idle, faults = readings(dated)
+        return (None if faults else _only(dated, live, idle)), faults
 
     def _fault(self, place: Place, text: str) -> None:
         fault = Fault(place, text)
@@ -206,9 +206,6 @@ class _Dating:
             else:
                 due[pay] = tuple(self._after_lag(day) for day in days)
         self.hits.append(DatedHit(event, watch, days, due))
-        if pays:
-            self.assumptions.append(f"a hit of '{watch.running.name}' counts for the calendar day on which it comes; a day "
-                                    f"runs from one close to the next, weekends and holidays included")
 
     def _refuse_before(self, pay: Pay, day: Day, due: Day) -> None:
         if due.time < day.time:
@@ -270,17 +267,22 @@ class _Dating:
             return day
 
 
-def _only(dated: DatedContract, live: frozenset[str]) -> DatedContract:
-    """Without the running values that nothing reads: they are not observed."""
+def _only(dated: DatedContract, live: frozenset[str], idle: frozenset[Place]) -> DatedContract:
+    """Without the running values that nothing reads, which are not observed, and the hits that nothing happens at."""
     moments = []
     for moment in dated.moments:
         updates = tuple(update for update in moment.updates if update.running.name in live)
-        if updates or moment.events:
-            moments.append(replace(moment, updates=updates))
+        events = tuple(each for each in moment.events if each.event.place not in idle)
+        if updates or events:
+            moments.append(replace(moment, updates=updates, events=events))
     watches = tuple(watch for watch in dated.watches if watch.running.name in live)
     today = [f"the observation on {moment.day}, the valuation date, uses the market's spot"
              for moment in moments[:1] if moment.day.date and moment.day.date == dated.valuation]
-    return replace(dated, moments=tuple(moments), watches=watches, assumptions=(*dated.assumptions, *today))
+    hits = tuple(hit for hit in dated.hits if hit.event.place not in idle)
+    by_day = [f"a hit of '{hit.watch.running.name}' counts for the calendar day on which it comes, weekends and holidays "
+              f"included; a day runs from one close to the next" for hit in hits if hit.due and hit.days]
+    return replace(dated, moments=tuple(moments), watches=watches, hits=hits,
+                   assumptions=(*dated.assumptions, *today, *dict.fromkeys(by_day)))
 
 
 def _years(start: Day, day: Day) -> float:

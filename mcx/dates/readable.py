@@ -52,9 +52,10 @@ class Seen:
     wrong: dict[str, Fault] = field(default_factory=dict)
 
 
-def readings(dated: DatedContract) -> tuple[frozenset[str], list[Fault]]:
-    """The running values that payments depend on, and the faults of reading: names without a value where
-    they are read, and optional terms that the contract states but nothing reads."""
+def readings(dated: DatedContract) -> tuple[frozenset[str], frozenset[Place], list[Fault]]:
+    """The running values that payments depend on, the events at hits that the terms rule out, and the faults of
+    reading: names without a value where they are read, and optional terms that the contract states but nothing
+    reads."""
     walk = _Walk(dated)
     walk.along()
     payoff = dated.contract.payoff
@@ -70,7 +71,7 @@ def readings(dated: DatedContract) -> tuple[frozenset[str], list[Fault]]:
                 live.add(running.name)
                 queue += [walk.seen[running.place]] if running.place in walk.seen else []
     faults = list(counted.wrong.values()) or _never_read(dated.contract, counted.terms)
-    return frozenset(live), sorted(faults)
+    return frozenset(live), frozenset(walk.idle), sorted(faults)
 
 
 def _never_read(contract: Contract, read: set[str]) -> list[Fault]:
@@ -98,6 +99,7 @@ class _Walk:
         self.occasion: Occasion | None = None
         self.owner = Seen()
         self.owner_place: Place | None = None
+        self.idle: set[Place] = set()
 
     def along(self) -> None:
         for running in self.running.values():
@@ -137,9 +139,11 @@ class _Walk:
         event = dated_event.event
         self._look(event, dated_event.occasion)
         once = event.at.part == "once"
-        if once:
-            self.owner.running.add(event.at.name)
         holds = self._read(event.condition) if event.condition is not None else 1.0
+        if once and holds == 0.0 and not event.otherwise:
+            self.idle.add(event.place)
+        elif once:
+            self.owner.running.add(event.at.name)
         fresh = self._memory(*_formulas(event))
         taken = [*event.then] if holds is None or holds else []
         taken += [] if holds else event.otherwise

@@ -7,9 +7,10 @@ its discount factor, `years`, and the level of the asset, which is the barrier's
 
 from __future__ import annotations
 
+import datetime
 import math
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 from mcx.checked.formula import Name
 from mcx.checked.payoff import End, Pay
@@ -32,13 +33,33 @@ WHICH_FIRST = ("it ends the contract, and so may a hit of '{}' be first in the s
 
 
 @dataclass(frozen=True, slots=True)
+class Span:
+    """The time between two days of the contract, within which a hit may come."""
+
+    since: Day
+    until: Day
+
+    @property
+    def time(self) -> float:
+        return self.until.time
+
+    @property
+    def date(self) -> datetime.date | None:
+        return self.until.date
+
+    def __str__(self) -> str:
+        return f"{self.since} to {self.until}"
+
+
+@dataclass(frozen=True, slots=True)
 class Stretch:
-    """A part of a hit's watch, one step of the grid; of no length on its first day. `day` is the contract's next."""
+    """A part of a hit's watch, one step of the grid; of no length on its first day. `day` is the contract's day, or the
+    two days between which it lies."""
 
     hit: DatedHit
     start: float
     end: float
-    day: Day
+    day: Day | Span
 
 
 @dataclass(frozen=True, slots=True)
@@ -78,7 +99,9 @@ class Hits:
         first, last = hit.watch.start.time, hit.watch.end.time
         inside = [time for time in cuts if first <= time <= last]
         for start, end in ((first, first), *zip(inside, inside[1:])):
-            yield Stretch(hit, start, end, next(day for day in self._days if day.time >= end))
+            until = next(day for day in self._days if day.time >= end)
+            since = [day for day in self._days if day.time < end]
+            yield Stretch(hit, start, end, Span(since[-1], until) if start < end else until)
 
     def until(self, time: float) -> Iterator[Stretch]:
         """The stretches that end by a time, each once."""

@@ -91,7 +91,7 @@ def lower(tape: Tape, leaf_values: Sequence[float] | np.ndarray) -> Program:
             if last_use[number] == number:  # nothing reads it: the register is free at once
                 registers.free.append(operand[number])
             for value in set(step.operands):
-                if last_use[value] == number and operand[value] >= draws:
+                if last_use[value] == number and operand.get(value, -1) >= draws:
                     registers.free.append(operand[value])
     outputs = [read(output.value) for output in tape.outputs]
     return Program(
