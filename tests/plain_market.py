@@ -127,6 +127,17 @@ def bridge_high(x0: float, x1: float, variance: float, uniform: float) -> float:
     return -bridge_low(-x0, -x1, variance, uniform)
 
 
+def moment_of_hit(d0: float, d1: float, variance: float, normal: float, uniform: float) -> float:
+    """Which part of a step has passed when a bridge with ends d0 and d1 away from a level reaches it first, given that it
+    does: s = t / (1 - t) is inverse Gaussian with the mean d0 / d1 and the shape d0^2 / variance. A draw of it solves
+    (s - mean)^2 shape / (mean^2 s) = normal^2 by one of its two roots (Michael, Schucany & Haas 1976)."""
+    mean, shape = d0 / d1, d0 * d0 / variance
+    doubled = 2.0 + normal * normal * mean / shape  # the roots over the mean multiply to 1 and add up to this
+    small = 2.0 / (doubled + math.sqrt(doubled * doubled - 4.0))
+    root = mean * (small if uniform <= 1.0 / (1.0 + small) else 1.0 / small)
+    return root / (1.0 + root)
+
+
 def within(x0: complex, x1: complex, low: complex, high: complex, variance: float) -> complex:
     """The probability that a bridge stays between two barriers: its images in both of them (Feller 1971, II, X.5)."""
     total, width = 0.0, high - low

@@ -13,13 +13,13 @@ import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 
-from plain_market import PlainMarket, bridge_high, bridge_high_given_low, bridge_low
+from plain_market import PlainMarket, bridge_high, bridge_high_given_low, bridge_low, moment_of_hit
 
 from mcx.checked import formula as trees
 from mcx.checked.contract import Figures, Word
 from mcx.checked.market import Market
 from mcx.checked.payoff import Assign, End, Event, Pay, Running
-from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Moment, Occasion, Update, Watch
+from mcx.dates.dated_contract import DatedContract, DatedEvent, DatedHit, Day, Moment, Occasion, Update, Watch
 from mcx.faults import Place
 
 Value = float | bool | tuple  # a number, a flag, or one of them for each asset
@@ -273,7 +273,8 @@ class Reference:
         """Which extremes of which assets a continuous watch needs, found by trying levels in its formula.
 
         An extreme of a number needs the assets that the number depends on. A flag is needed from the side on which,
-        one asset moved alone from one far end to the other, it becomes what it waits for.
+        one asset moved alone from one far end to the other, or from the spots to one of them, it becomes what it waits
+        for.
         """
         walk, count, found = Walk(self.dated, self.market), len(self.spots), set()
 
@@ -282,9 +283,10 @@ class Reference:
             return walk.evaluate(running.formula)
 
         for asset in range(count):
-            for side, calm, far in (("low", HUGE, TINY), ("high", TINY, HUGE)):
-                before = value([calm] * count)
-                after = value([far if k == asset else calm for k in range(count)])
+            for side, far, calm in (("low", TINY, [HUGE] * count), ("high", HUGE, [TINY] * count),
+                                    ("low", TINY, self.spots), ("high", HUGE, self.spots)):
+                before = value(list(calm))
+                after = value([far if k == asset else level for k, level in enumerate(calm)])
                 if running.how in ("lowest", "highest"):
                     wanted = before != after and side == {"lowest": "low", "highest": "high"}[running.how]
                 else:
@@ -293,23 +295,30 @@ class Reference:
                     found.add((asset, side))
         return found
 
-    def path(self, normal: Callable[[int, int], float], uniform: Callable[[int, int, str], float]) -> Result:
+    def path(self, normal: Callable[[int, int], float], uniform: Callable[[int, int, str], float],
+             pair: tuple[float, float] = (math.nan, math.nan)) -> Result:
         """What the contract pays on one path.
 
         `normal(step, k)` is the normal of the k-th moving asset in a step, `uniform(step, asset, side)` the uniform of a watched extreme
-        inside it, side 'low' or 'high'.
+        inside it, side 'low' or 'high'; `pair` a normal and a uniform for the moment of a hit.
         """
+        self.pair = pair
         walk, levels = Walk(self.dated, self.market), self.spots
         walk.result.life = max((day.time for moment in self.dated.moments for event in moment.events
                                 for day in event.due.values()), default=0.0)
+        for hit in self.dated.hits:
+            pays = [one for one in (*hit.event.then, *hit.event.otherwise) if isinstance(one, Pay)]
+            latest = [hit.due[pay][-1].time if pay in hit.due else hit.watch.end.time for pay in pays]
+            walk.result.life = max([walk.result.life, *latest])
         starts = {self.snap(watch.start.time) for watch in self.dated.watches}
         for time in sorted({0.0, *self.grid, *self.moments, *starts}):
             low = high = None
+            before = levels
             if time in self.grid:
                 step = self.grid.index(time)
                 levels, low, high = self.advance(step, levels, normal, uniform)
             known = time <= 0.0 or time in self.grid
-            if self.live(walk, time, plain(levels) if known else None, low, high):
+            if self.live(walk, time, plain(levels) if known else None, low, high, (before, levels)):
                 break
         return walk.result
 
@@ -339,12 +348,14 @@ class Reference:
                 if self.snap(watch.start.time) <= start and end <= self.snap(watch.end.time)
                 for side in self.sides[watch.running.name] if side[0] in self.assets}
 
-    def live(self, walk: Walk, time: float, levels: Value | None, low: Value | None, high: Value | None) -> bool:
+    def live(self, walk: Walk, time: float, levels: Value | None, low: Value | None, high: Value | None,
+             ends: tuple[tuple[float, ...], tuple[float, ...]]) -> bool:
         """All that happens at one time: running values in file order, then events; True if the contract ends."""
         moments = self.moments.get(time, [])
         todo: list[Watch | Update] = [update for moment in moments for update in moment.updates]
         todo += [watch for watch in self.dated.watches
                  if self.snap(watch.start.time) <= time <= self.snap(watch.end.time)]
+        before = dict(walk.values)
         for item in sorted(todo, key=lambda one: self.order[one.running.name]):
             if isinstance(item, Update):
                 walk.look(item.occasion, item.running, levels)
@@ -354,8 +365,15 @@ class Reference:
             for extreme in seen:
                 walk.look(None, item.running, extreme)
                 walk.observe(item.running)
+        for hit in self.dated.hits:
+            name = hit.event.at.name
+            if walk.values.get(name) and not before.get(name) and self.hit(walk, hit, time, ends):
+                return True
         events = [event for moment in moments for event in moment.events]
         for number, dated_event in enumerate(events):
+            name = dated_event.event.at.name
+            if dated_event.event.at.part == "once" and (before.get(name) or not walk.values[name]):
+                continue
             walk.look(dated_event.occasion, dated_event.event, levels)
             if walk.happen(dated_event):
                 if math.isnan(walk.result.life):  # nothing is paid with the end itself: what fell due that day, if any
@@ -363,6 +381,45 @@ class Reference:
                     walk.result.life = max(due, default=dated_event.occasion.day.time)
                 return True
         return False
+
+
+    def hit(self, walk: Walk, hit: DatedHit, time: float, ends: tuple[tuple[float, ...], tuple[float, ...]]) -> bool:
+        """What happens at the hit of a watch inside the step that ends at `time`; True if the contract ends."""
+        running, moment, levels = hit.watch.running, time, ends[1]
+        if time > self.snap(hit.watch.start.time):
+            ((asset, _),) = self.sides[running.name]
+            level, step = self.turning_level(walk, running, asset, ends[0]), self.grid.index(time)
+            d0, d1 = (abs(math.log(end[asset] / level)) for end in ends)
+            variance = self.steps[step].variances[self.assets.index(asset)]
+            start = (0.0, *self.grid)[step]
+            moment = start + (time - start) * moment_of_hit(d0, d1, variance, *self.pair)
+            levels = tuple(level if k == asset else math.nan for k in range(len(levels)))
+        day, due = Day(moment), dict.fromkeys(hit.due, Day(moment))
+        if hit.days:  # a day ends with its close
+            number = next(k for k, one in enumerate(hit.days) if one.time >= moment - SAME_TIME)
+            day, due = hit.days[number], {pay: days[number] for pay, days in hit.due.items()}
+        else:
+            pays = [one for one in (*hit.event.then, *hit.event.otherwise) if isinstance(one, Pay)]
+            due = {pay: hit.due[pay][0] if pay in hit.due else day for pay in pays}
+        occasion = Occasion(day, "", 1, 1, math.nan, day.time - self.dated.start.time, {})
+        walk.look(occasion, hit.event, plain(levels))
+        ended = walk.happen(DatedEvent(hit.event, occasion, due))
+        if ended and math.isnan(walk.result.life):
+            walk.result.life = day.time
+        return ended
+
+    def turning_level(self, walk: Walk, running: Running, asset: int, levels: tuple[float, ...]) -> float:
+        """The level of an asset at which a flag turns, by halving between where it is and far beyond."""
+        def holds(level: float) -> bool:
+            walk.look(None, running, plain([level if k == asset else HUGE for k in range(len(levels))]))
+            return bool(walk.evaluate(running.formula))
+
+        calm = levels[asset]
+        far = TINY if holds(TINY) else HUGE
+        for _ in range(200):
+            middle = math.sqrt(calm * far)
+            calm, far = (calm, middle) if holds(middle) else (middle, far)
+        return far
 
 
 def running_label(running: Running) -> str:
