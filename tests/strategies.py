@@ -11,7 +11,8 @@ from mcx.tape.program import Instruction, Leaf, LeafKind, LevelKey, Output, Tape
 NORMALS, UNIFORMS, LEAVES = 3, 2, 4
 TIMES = (0.0, 0.25, 0.5, 1.0)
 NUMBER_OPS = (Op.ADD, Op.SUB, Op.MUL, Op.NEG, Op.MIN, Op.MAX, Op.ABS, Op.STEP, Op.SELECT)
-GUARDED_OPS = (Op.DIV, Op.POW, Op.EXP, Op.LOG, Op.SQRT, Op.BRIDGE_LOW, Op.BRIDGE_HIGH)
+GUARDED_OPS = (Op.DIV, Op.POW, Op.EXP, Op.LOG, Op.SQRT, Op.BRIDGE_LOW, Op.BRIDGE_HIGH, Op.BRIDGE_CLEAR,
+               Op.BRIDGE_CORRIDOR, Op.LOOKUP)
 FLAG_OPS = (Op.LT, Op.LE, Op.EQ, Op.NE, Op.AND, Op.OR, Op.NOT)
 
 
@@ -82,6 +83,12 @@ def _grow(draw: st.DrawFn, raw: RawTape, uniforms: list[int]) -> None:
             raw.put(op, positive)
         elif op is Op.DIV:
             raw.put(op, draw(number), positive)
+        elif op is Op.BRIDGE_CLEAR:
+            raw.put(op, draw(number), draw(number), positive)
+        elif op is Op.BRIDGE_CORRIDOR:
+            raw.put(op, draw(number), draw(number), positive, raw.put(Op.ADD, positive, raw.constant(0.1)))
+        elif op is Op.LOOKUP:  # its entries are the same on every path
+            raw.put(op, draw(number), *(raw.constant(entry) for entry in (1.5, -2.0, 0.25)))
         elif op is Op.POW:
             raw.put(op, positive, raw.constant(draw(st.sampled_from([0.5, 1.0, -1.0, 1.5]))))
         elif uniforms:
