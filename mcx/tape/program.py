@@ -168,7 +168,8 @@ class Program:
     Rows 0 .. draws-1 of the register file hold the draws (normals first, then uniforms); rows draws .. rows-1 are
     work registers. An operand k >= 0 is row k; k < 0 is `scalars[-1 - k]`.
 
-    code      (instructions, 6) int32: op, destination row, operands a, b, c, d (unused: 0)
+    code      (instructions, 6) int32: op, destination row, operands a, b, c, d (unused: 0); of a LOOKUP what it counts,
+              its first entry and its last, between which its entries stand in `scalars`
     scalars   (scalars,) float64: values that are the same on every path
     outputs   (outputs,) int32: operand number of each output
     """
