@@ -54,11 +54,12 @@ class Form(IntEnum):
     BRIDGE_HIGH_RRSR = auto()
     CLEAR_EXPONENT_RRS = auto()  # d0 d1 s where both distances are positive, else 0
     IMAGE_RRSS = auto()  # min((d0 + s)(d1 + s) t, 0): the exponent of an image of the corridor
-    FAR_RRSS = auto()  # min(s + t |d0 - d1|, 0): the exponent of one that has been mirrored twice
+    FAR_RRRS = auto()  # x + exp(s + t |d0 - d1|), s and t one behind the other: an image that has been mirrored twice
     INSIDE_RRRS = auto()  # max(x, 0) where 0 < d0, d1 < s, else 0
     BRIDGE_CLEAR_RRR = auto()
     BRIDGE_CORRIDOR_RRRR = auto()
     BRIDGE_RANGE_RRRR = auto()
+    BRIDGE_MOMENT_RRRR = auto()
     LOOKUP_RSS = auto()  # the entry that x counts of the scalars from the one to the other
 
 

@@ -12,6 +12,7 @@ from mcx.machine.bridges import bridge_range, corridor
 from mcx.machine.forms import Form
 from mcx.machine.jit import jit
 from mcx.machine.special import exp_row, log_row
+from mcx.tape.bridges import CLOSEST, LEAST_EXPONENT
 
 
 @jit
@@ -209,10 +210,17 @@ def _watch(form, y, registers, scalars, a, b, c, d, lanes):
         p, q, s, t = registers[a], registers[b], scalars[c], scalars[d]
         for i in range(lanes):
             y[i] = min((p[i] + s) * (q[i] + s) * t, 0.0)
-    elif form == Form.FAR_RRSS:
-        p, q, s, t = registers[a], registers[b], scalars[c], scalars[d]
+    elif form == Form.FAR_RRRS:  # hardly ever does it count: only where the bridge crosses nearly all of the corridor
+        x, p, q, s, t = registers[a], registers[b], registers[c], scalars[d], scalars[d + 1]
+        counts = 0
         for i in range(lanes):
-            y[i] = min(s + t * abs(p[i] - q[i]), 0.0)
+            y[i] = x[i]
+            counts += s + t * abs(p[i] - q[i]) > LEAST_EXPONENT
+        if counts > 0:
+            for i in range(lanes):
+                exponent = s + t * abs(p[i] - q[i])
+                if exponent > LEAST_EXPONENT:
+                    y[i] = x[i] + np.exp(min(exponent, 0.0))
     elif form == Form.INSIDE_RRRS:
         x, p, q, s = registers[a], registers[b], registers[c], scalars[d]
         for i in range(lanes):
@@ -230,6 +238,15 @@ def _watch(form, y, registers, scalars, a, b, c, d, lanes):
         p, q, v, u = registers[a], registers[b], registers[c], registers[d]
         for i in range(lanes):
             y[i] = bridge_range(p[i], q[i], v[i], u[i])
+    elif form == Form.BRIDGE_MOMENT_RRRR:
+        p, q, square, u = registers[a], registers[b], registers[c], registers[d]
+        for i in range(lanes):
+            d0, d1 = max(abs(p[i]), CLOSEST), max(abs(q[i]), CLOSEST)
+            half = square[i] / (d0 * d1)
+            ratio = 1.0 + half + np.sqrt(half * (half + 2.0))
+            small = u[i] * (1.0 + ratio) <= ratio
+            passed, rest = d0 if small else d0 * ratio, d1 * ratio if small else d1
+            y[i] = passed / (passed + rest)
     elif form == Form.LOOKUP_RSS:
         x, last = registers[a], c - b
         for i in range(lanes):

@@ -12,14 +12,13 @@ from dataclasses import dataclass
 import numpy as np
 
 from mcx.machine.forms import FORMS, Form, kinds
-from mcx.tape.bridges import IMAGES, LONG_STEP
+from mcx.tape.bridges import IMAGES, LEAST_EXPONENT, LONG_STEP
 from mcx.tape.ops import OPS, Op
 from mcx.tape.program import Program
 
 WIDTH = 6  # form, destination, up to four operands
 _WHOLE_POWERS = range(-8, 9)  # x ** n by multiplications
 _TABLE = 3  # operands of a LOOKUP: what it counts, its first entry and its last
-LEAST_EXPONENT = 40.0  # exp(-40) is lost beside 1
 
 
 @dataclass(frozen=True, slots=True)
@@ -172,19 +171,20 @@ class _Writer:
             return self.choose(Op.BRIDGE_CORRIDOR, to, d0, d1, width, self.constant(variance))
         d0, d1 = self.row(d0), self.row(d1)
         exponent, image, other, total = (self.scratch() for _ in range(4))
-        reach, rate = 2.0 * w * w / variance, -2.0 / variance
-        terms = [(Form.IMAGE_RRSS, n * w, rate) for n in sorted(range(-IMAGES, IMAGES + 1), key=abs)
-                 if min(n * n, (n + 1) ** 2) * reach < LEAST_EXPONENT]
-        terms += [(Form.FAR_RRSS, -n * n * reach, sign * n * reach / w) for n in range(1, IMAGES + 1)
-                  for sign in (1, -1) if (n * n - n * (sign > 0)) * reach < LEAST_EXPONENT]
-        for number, (form, s, t) in enumerate(terms):
-            self.emit(form, exponent, d0, d1, self.constant(s), self.constant(t))
+        reach, rate = 2.0 * w * w / variance, self.constant(-2.0 / variance)
+        numbers = sorted(range(-IMAGES, IMAGES + 1), key=abs)
+        self.emit(Form.FILL_S, total, self.constant(1.0))
+        for n in (n for n in numbers if min(n * n, (n + 1) ** 2) * reach < -LEAST_EXPONENT):
+            self.emit(Form.IMAGE_RRSS, exponent, d0, d1, self.constant(n * w), rate)
             self.emit(Form.EXP_R, image, exponent)
-            if number == 0:
-                self.emit(Form.SUB_SR, total, self.constant(1.0), image)
-                continue
-            self.emit(Form.ADD_RR if form is Form.FAR_RRSS else Form.SUB_RR, other, total, image)
+            self.emit(Form.SUB_RR, other, total, image)
             total, other = other, total
+        for n, sign in ((n, sign) for n in numbers if n > 0 for sign in (1, -1)):
+            if (n * n - n * (sign > 0)) * reach < -LEAST_EXPONENT:
+                first = self.constant(-n * n * reach)
+                self.constant(sign * n * reach / w)
+                self.emit(Form.FAR_RRRS, other, total, d0, d1, first)
+                total, other = other, total
         self.emit(Form.INSIDE_RRRS, to, total, d0, d1, width)
 
     def row(self, source: int) -> int:

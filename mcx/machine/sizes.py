@@ -29,6 +29,8 @@ _DEAR = {
     Form.BRIDGE_CLEAR_RRR: 6.0,
     Form.BRIDGE_CORRIDOR_RRRR: 90.0,
     Form.BRIDGE_RANGE_RRRR: 900.0,
+    Form.BRIDGE_MOMENT_RRRR: 2.5,
+    Form.FAR_RRRS: 0.4,
     Form.LOOKUP_RSS: 1.0,
 }
 _BY_FORM = np.array([_DEAR.get(form, _USUAL) for form in Form])

@@ -13,8 +13,10 @@ Value = np.ndarray | np.float64 | float
 
 LONG_STEP = 0.6  # variance over width squared: up to here images, beyond it the sine series
 SINES, IMAGES = 5, 4  # terms on either side; what is left out is below 1e-17 at LONG_STEP
+LEAST_EXPONENT = -40.0  # exp(-40) is lost beside 1
 HALVINGS = 80
 NARROWEST = 0.3  # deviations: a range below this has a probability below 1e-22
+CLOSEST = 1e-12  # of a log to a level: nearer than this the law of the moment has no finite numbers
 LEAST_ENDS = 1e-5  # deviations: with both ends closer to the minimum than this the law's terms all but cancel
 
 
@@ -88,6 +90,23 @@ def bridge_range(d0: Value, d1: Value, variance: Value, u: Value) -> Value:
         under = range_below(middle, d0, d1, variance) < u
         low, high = np.where(under, middle, low), np.where(under, high, middle)
     return np.where(np.equal(variance, 0.0), least, 0.5 * (low + high))[()]
+
+
+def bridge_moment(d0: Value, d1: Value, half_square: Value, u: Value) -> Value:
+    """Which part of a step has passed when a bridge first reaches a level, given that it does; d0 and d1 are its ends'
+    distances from the level, on whichever side, `half_square` is half the variance of the step times the square of a
+    normal, u a uniform.
+
+    With T the step and t the moment, t / (T - t) is inverse Gaussian (in the clock of variance) with the mean d0 / d1 and
+    the shape d0^2 / variance. Of the two roots that such a normal has, `ratio` is the larger over the mean, and u chooses
+    (Michael, Schucany and Haas, "Generating random variates using transformations with multiple roots", 1976).
+    """
+    d0, d1 = np.maximum(np.abs(d0), CLOSEST), np.maximum(np.abs(d1), CLOSEST)
+    half = half_square / (d0 * d1)
+    ratio = 1.0 + half + np.sqrt(half * (half + 2.0))
+    small = u * (1.0 + ratio) <= ratio
+    passed, rest = np.where(small, d0, d0 * ratio), np.where(small, d1 * ratio, d1)
+    return passed / (passed + rest)
 
 
 def lookup(x: Value, *entries: Value) -> Value:

@@ -54,6 +54,7 @@ class Op(IntEnum):
     BRIDGE_CORRIDOR = 53  # likewise of two barriers; operands (d0, d1, width, variance), d0 and d1 from the lower
     BRIDGE_RANGE = 54  # maximum less minimum of a bridge, given the minimum; operands (d0, d1, variance, u)
     LOOKUP = 55  # the entry that the whole part of x counts; operands (x, entries...), entries the same on every path
+    BRIDGE_MOMENT = 56  # which part of a step has passed at its hit; operands (d0, d1, normal^2 variance / 2, u)
 
 
 ANY = -1  # the arity of an operation that takes any number of operands
@@ -105,4 +106,5 @@ OPS: dict[Op, OpRow] = {
     Op.BRIDGE_CORRIDOR: OpRow(4, "bridge_corridor({0}, {1}, width {2}, variance {3})"),
     Op.BRIDGE_RANGE: OpRow(4, "bridge_range({0}, {1}, variance {2}, {3})"),
     Op.LOOKUP: OpRow(ANY, "lookup"),
+    Op.BRIDGE_MOMENT: OpRow(4, "bridge_moment({0}, {1}, {2}, {3})"),
 }

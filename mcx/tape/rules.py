@@ -12,7 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from mcx.tape.bridges import bridge_clear, bridge_corridor, bridge_range, lookup
+from mcx.tape.bridges import bridge_clear, bridge_corridor, bridge_moment, bridge_range, lookup
 from mcx.tape.ops import Op
 
 Value = np.ndarray | np.float64 | float
@@ -74,6 +74,7 @@ RULES: dict[Op, Rule] = {
     Op.BRIDGE_CORRIDOR: Rule(bridge_corridor),
     Op.BRIDGE_RANGE: Rule(bridge_range),
     Op.LOOKUP: Rule(lookup),
+    Op.BRIDGE_MOMENT: Rule(bridge_moment),
 }
 
 

@@ -15,11 +15,10 @@ from dataclasses import dataclass
 from mcx.faults import Place
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
-from mcx.tape.passes import drop_dead_code
+from mcx.tape.passes import drop_dead_code, in_order_of_steps
 from mcx.tape.program import Bound, Leaf, LeafKind, LevelKey, Tape, Unhit
 
 SAME_TIME = 1e-9  # years: about 0.03 s; dates closer than that are one date, written in two ways
-CLOSEST = 1e-12  # of a log to a level: nearer than this the law of the moment has no finite numbers
 
 
 @dataclass(frozen=True, slots=True)
@@ -54,8 +53,9 @@ def expand_levels(tape: Tape, nodes: Sequence[float], pieces: int = 1) -> tuple[
             values.append(walk.builder.copy(step, tuple(values[k] for k in step.operands)))
     outputs = [output.at(values[output.value]) for output in tape.outputs]
     grid = Grid(tuple(walk.times), tuple(walk.assets))
-    normals = (len(grid.times) - 1) * len(grid.assets) + (walk.pair is not None)
-    return drop_dead_code(walk.builder.tape(outputs, normals, walk.uniforms)), grid
+    normals = walk.steps * len(grid.assets) + (walk.pair is not None)
+    made = drop_dead_code(walk.builder.tape(outputs, normals, walk.uniforms))
+    return in_order_of_steps(made, walk.step_of) if walk.chances else made, grid
 
 
 def grid_times(read: Iterable[LevelKey], watched: Iterable[LevelKey], nodes: Iterable[float]) -> list[float]:
@@ -102,6 +102,7 @@ class _Walk:
         self.times = refined(grid_times(levels, watched, nodes), [(key.start, key.time) for key in together], pieces)
         self._number = {time: number for number, time in enumerate(self.times)}
         self.assets = sorted({key.asset for key in levels if self.number(key.time)} | {key.asset for key in watched})
+        self.chances = bool(chances)
         self.builder = Builder()
         self.uniforms = 0
         self.reached = 0
@@ -225,31 +226,29 @@ class _Walk:
         return emit(Op.BRIDGE_CORRIDOR, *distances, emit(Op.SUB, high, low), variance)
 
     def moment(self, key: LevelKey, level: int) -> int:
-        """Which part of the step that ends at a key's time has passed when the level is reached first, given that it
-        is. With T the step and t the moment, t / (T - t) is inverse Gaussian (in the clock of variance) with the mean
-        d0 / d1 and the shape d0^2 / variance, d0 and d1 the distances of the ends from the level; drawn by the method
-        of Michael, Schucany and Haas, "Generating random variates using transformations with multiple roots" (1976).
+        """Which part of the step that ends at a key's time has passed when the level is reached first.
 
-        One pair of draws serves all steps of the tape: what is paid at a hit is a sum over steps, of which each has
-        the right law.
+        One normal and one uniform serve all steps of the tape: what is paid at a hit is a sum over steps, of which each
+        has the right law.
         """
-        emit, constant, number = self.builder.emit, self.builder.constant, self.number(key.time)
+        emit, number = self.builder.emit, self.number(key.time)
         self.advance(number)
         assert self.number(key.start) == number - 1, "the stretch of a moment is one step"
         if self.pair is None:
-            normal = self.builder.input(Op.NORMAL, (len(self.times) - 1) * len(self.assets))
+            normal = self.builder.input(Op.NORMAL, self.steps * len(self.assets))
             self.pair = emit(Op.MUL, normal, normal), self.builder.input(Op.UNIFORM, self.uniforms)
             self.uniforms += 1
         square, uniform = self.pair
-        one, log = constant(1.0), emit(Op.LOG, level)
-        d0, d1 = (emit(Op.MAX, emit(Op.ABS, emit(Op.SUB, self.log(key.asset, end), log)), constant(CLOSEST))
-                  for end in (number - 1, number))
+        log = emit(Op.LOG, level)
+        ends = (emit(Op.SUB, self.log(key.asset, end), log) for end in (number - 1, number))
         variance = self.builder.leaf(Leaf(LeafKind.VARIANCE, key.asset, start=key.start, end=key.time))
-        mean = emit(Op.DIV, d0, d1)
-        half = emit(Op.DIV, emit(Op.MUL, square, emit(Op.MUL, variance, constant(0.5))), emit(Op.MUL, d0, d1))
-        root = emit(Op.SQRT, emit(Op.MUL, half, emit(Op.ADD, half, constant(2.0))))
-        part = emit(Op.DIV, one, emit(Op.ADD, emit(Op.ADD, half, one), root))  # the smaller root over the mean
-        ratio = emit(Op.SELECT, emit(Op.LE, emit(Op.MUL, uniform, emit(Op.ADD, one, part)), one), part,
-                     emit(Op.DIV, one, part))
-        odds = emit(Op.MUL, mean, ratio)
-        return emit(Op.DIV, odds, emit(Op.ADD, odds, one))
+        half = emit(Op.MUL, square, emit(Op.MUL, variance, self.builder.constant(0.5)))
+        return emit(Op.BRIDGE_MOMENT, *ends, half, uniform)
+
+    @property
+    def steps(self) -> int:
+        return len(self.times) - 1
+
+    def step_of(self, dimension: int) -> int:
+        """The step that a normal moves; 0 for that of the moments."""
+        return dimension // len(self.assets) + 1 if dimension < self.steps * len(self.assets) else 0

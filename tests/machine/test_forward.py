@@ -10,7 +10,7 @@ import numpy as np
 import pytest
 from made_programs import on_rows, program
 
-from mcx.tape.bridges import bridge_corridor, bridge_range, range_below
+from mcx.tape.bridges import bridge_corridor, bridge_moment, bridge_range, range_below
 from mcx.tape.ops import OPS, Op
 from mcx.tape.rules import RULES
 
@@ -49,6 +49,7 @@ PLAIN: dict[Op, Callable[..., np.ndarray]] = {
     Op.BRIDGE_CLEAR: lambda d0, d1, v: np.where((d0 > 0) & (d1 > 0), 1.0 - np.exp(-2.0 * d0 * d1 / v), 0.0),
     Op.BRIDGE_CORRIDOR: bridge_corridor,
     Op.BRIDGE_RANGE: bridge_range,
+    Op.BRIDGE_MOMENT: bridge_moment,
 }
 SPECIAL = (0.0, -0.0, 1.0, -1.0, 2.0, 0.5, NAN, INF, -INF, 1e-310, 1e300, -3.0)
 
@@ -61,13 +62,15 @@ def operand_rows(op: Op) -> np.ndarray:
     if op in (Op.BRIDGE_LOW, Op.BRIDGE_HIGH):
         rows[2], rows[3] = np.abs(rows[2]), rng.uniform(0.0, 1.0, 64)
         rows[2, :8] = 0.0  # no variance: the ends themselves
-    elif op in (Op.BRIDGE_CLEAR, Op.BRIDGE_CORRIDOR, Op.BRIDGE_RANGE):
+    elif op in (Op.BRIDGE_CLEAR, Op.BRIDGE_CORRIDOR, Op.BRIDGE_RANGE, Op.BRIDGE_MOMENT):
         rows[2:] = np.abs(rows[2:]) + 0.1
         rows[2 if op is Op.BRIDGE_RANGE else OPS[op].arity - 1, :4] = 0.0  # no variance
         if op is Op.BRIDGE_CORRIDOR:
             rows[:2, 32:] = np.abs(rows[:2, 32:]) * 0.3
             rows[3, 16:] *= 10.0 ** rng.uniform(-2.0, 1.0, 48)  # short steps and long ones
             rows[2, 60:] = INF, INF, -1.0, 1e-3
+        elif op is Op.BRIDGE_MOMENT:
+            rows[3] = rng.uniform(0.0, 1.0, 64)
         elif op is Op.BRIDGE_RANGE:
             rows[:2], rows[3] = np.abs(rows[:2]), rng.uniform(0.0, 1.0, 64)
     elif op is Op.POW:
