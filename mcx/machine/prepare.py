@@ -173,11 +173,13 @@ class _Writer:
         exponent, image, other, total = (self.scratch() for _ in range(4))
         reach, rate = 2.0 * w * w / variance, self.constant(-2.0 / variance)
         numbers = sorted(range(-IMAGES, IMAGES + 1), key=abs)
-        self.emit(Form.FILL_S, total, self.constant(1.0))
         for n in (n for n in numbers if min(n * n, (n + 1) ** 2) * reach < -LEAST_EXPONENT):
             self.emit(Form.IMAGE_RRSS, exponent, d0, d1, self.constant(n * w), rate)
             self.emit(Form.EXP_R, image, exponent)
-            self.emit(Form.SUB_RR, other, total, image)
+            if n == 0:
+                self.emit(Form.SUB_SR, other, self.constant(1.0), image)
+            else:
+                self.emit(Form.SUB_RR, other, total, image)
             total, other = other, total
         for n, sign in ((n, sign) for n in numbers if n > 0 for sign in (1, -1)):
             if (n * n - n * (sign > 0)) * reach < -LEAST_EXPONENT:

@@ -29,7 +29,7 @@ _DEAR = {
     Form.BRIDGE_CLEAR_RRR: 6.0,
     Form.BRIDGE_CORRIDOR_RRRR: 90.0,
     Form.BRIDGE_RANGE_RRRR: 900.0,
-    Form.BRIDGE_MOMENT_RRRR: 2.5,
+    Form.BRIDGE_MOMENT_RRRR: 1.9,
     Form.FAR_RRRS: 0.4,
     Form.LOOKUP_RSS: 1.0,
 }
