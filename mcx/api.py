@@ -12,10 +12,11 @@ from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from mcx.checked.load import Request, checked_request, request
+from mcx.checked.load import Request, checked_request
 from mcx.dates.dated_contract import DatedContract
 from mcx.dates.dating import date_contract
 from mcx.faults import Fault, InputError, Place, Refusal, RequestError, did_you_mean
+from mcx.text.documents import read_documents
 from mcx.text.located import Document
 
 if TYPE_CHECKING:
@@ -139,12 +140,14 @@ def replay(
 
     threads = _threads(threads)
     stored = read_record(file)
-    made, faults = checked_request(documents_of(stored))
+    made, faults = checked_request(*documents_of(stored))
     dated = _all_dated(made, faults)
     runs = stored["request"]
+    if made.market is None or len(runs) != len(dated):
+        raise RequestError(f"{file}: the record has {len(runs)} requests for the {len(dated)} contracts in its inputs")
     asked = [precision(each["paths"], None, None) for each in runs]
     brackets = [each.get("bracket") for each in stored["results"]]
-    table = _price(made, dated, asked, [each["seed"] for each in runs], threads, progress, notice,
+    table = _price(made, dated, asked, [_seed(each["seed"]) for each in runs], threads, progress, notice,
                    [bracket and bracket["pieces"] for bracket in brackets])
     if table.interrupted:
         raise KeyboardInterrupt
@@ -155,12 +158,13 @@ def _dated(files: Sequence[File], *, with_market: bool) -> tuple[Request, list[D
     """The documents of the files and their contracts with every date, all sound."""
     if not files:
         raise RequestError("no files are given")
-    made, faults = request(files)
+    documents, unread = read_documents(files)
+    made, faults = checked_request(documents, unread)
     kinds = {document.kind for document in made.documents}
     names = ", ".join(map(str, files))
     missing = [("contract", CONTRACT_BEGINS), ("market", MARKET_BEGINS)][: 1 + with_market]
     for kind, begins in missing:
-        if kind not in kinds and not any(fault.place.line == 1 == fault.place.column for fault in faults):
+        if kind not in kinds and not unread:  # else it may stand in what could not be read
             faults.append(Fault(Place(str(files[0]), 1, 1), f"no {kind} in {names}; expected {begins}"))
     return made, _all_dated(made, faults)
 
@@ -174,8 +178,18 @@ def _all_dated(made: Request, faults: Iterable[Fault]) -> list[DatedContract]:
         if found is not None:
             dated.append(found)
     if faults:
-        raise InputError(faults)
+        raise InputError([*faults, *_watches_refused(dated)])
     return dated
+
+
+def _watches_refused(dated: Iterable[DatedContract]) -> list[Fault]:
+    """The continuous watches that cannot be simulated, so that they are told beside the faults of the documents."""
+    watched = [each for each in dated if each.watches]
+    if not watched:
+        return []
+    from mcx.tape.unroll import unroll
+
+    return [fault for each in watched for fault in unroll(each, nodes=()).faults]
 
 
 def _price(
@@ -188,8 +202,8 @@ def _price(
     notice: Callable[[str], None] | None,
     pieces: Sequence[int | None] | None = None,
 ) -> PriceTable:
-    """Every contract valued; after an interruption those so far. `pieces` prescribe how fine the steps are where a price
-    lies between bounds."""
+    """Every contract valued; after an interruption those so far. Raises KeyboardInterrupt if that is none. `pieces`
+    prescribe how fine the steps are where a price lies between bounds."""
     from mcx.estimators.price import value
     from mcx.machine.run import NonFinitePath
     from mcx.report.results import PriceTable
@@ -199,17 +213,21 @@ def _price(
     pieces = pieces or [None] * len(dated)
     for ready, wish, seed, number in zip(_ready(made, dated), asked, seeds, pieces, strict=True):
         try:
-            ready, valuation = value(ready, wish, seed=seed, threads=threads, pieces=number, progress=progress,
-                                     notice=notice)
+            valuation = value(ready, wish, seed=seed, threads=threads, pieces=number, progress=progress,
+                              notice=notice)
         except NonFinitePath as trouble:
             output = ready.unrolled.tape.outputs[trouble.output if trouble.stream == 0 else 0].name
             raise Refusal(f"'{ready.dated.contract.title}': '{output}' is not a finite number on path {trouble.path} "
                           f"(seed {seed}, stream {trouble.stream}); a formula divides by 0, overflows or leaves the "
                           f"domain of log, sqrt or a power") from None
-        results.append(price_result(ready, made.market, valuation))
+        except KeyboardInterrupt:
+            if not results:
+                raise
+            break
+        results.append(price_result(valuation.ready, made.market, valuation))
         if valuation.interrupted:
             break
-    return PriceTable(tuple(results))
+    return PriceTable(tuple(results), tuple(each.contract.title for each in dated[len(results):]))
 
 
 def _ready(made: Request, dated: Sequence[DatedContract]) -> list[Ready]:
@@ -280,5 +298,5 @@ def _threads(threads: object) -> int | None:
 
 def _reduction(reduction: str) -> None:
     if reduction not in REDUCTIONS:
-        raise RequestError(f"the variance reduction '{reduction}' is not known to this version; it knows 'none', others "
-                           f"come with a later version")
+        raise RequestError(f"the variance reduction '{reduction}' is not known to this version; it knows 'none', "
+                           f"others come with a later version")

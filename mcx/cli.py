@@ -5,6 +5,8 @@
 
 from __future__ import annotations
 
+import atexit
+import gc
 import json
 import os
 import sys
@@ -39,8 +41,41 @@ def sampling(command: Callable) -> Callable:
     return command
 
 
-@click.group(context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
-@click.version_option(package_name="mcx", message="%(version)s")
+class ReaderGone(Exception):
+    """Whoever read standard output has gone away."""
+
+
+class Commands(click.Group):
+    """Commands whose reader may go away, which is nobody's fault: click would answer 1, and that means 'no' here."""
+
+    def parse_args(self, ctx: click.Context, args: list[str]) -> list[str]:
+        with _reader():
+            return super().parse_args(ctx, args)
+
+    def invoke(self, ctx: click.Context) -> object:
+        with _reader():
+            return super().invoke(ctx)
+
+
+@contextmanager
+def _reader() -> Iterator[None]:
+    try:
+        yield
+    except BrokenPipeError:
+        raise ReaderGone from None
+
+
+def _show_version(context: click.Context, _: click.Parameter, wanted: bool) -> None:
+    if wanted and not context.resilient_parsing:
+        from mcx import __version__
+
+        click.echo(__version__)
+        context.exit()
+
+
+@click.group(cls=Commands, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
+@click.option("--version", is_flag=True, is_eager=True, expose_value=False, callback=_show_version,
+              help="Show the version and exit.")
 def cli() -> None:
     """Independent values, with their errors, for structured notes and exotic options declared in YAML.
 
@@ -117,12 +152,15 @@ def main(arguments: list[str] | None = None) -> None:
     """The door: runs a command and ends the process with its exit code."""
     from mcx.faults import InputError, Refusal, RequestError
 
+    # What imports make stays until the process ends. Looking through it for garbage, on the way and once more before
+    # the end, would take a quarter of a short command's time.
+    gc.set_threshold(1_000_000)
+    atexit.register(gc.freeze)
     for stream in (sys.stdout, sys.stderr):
         if hasattr(stream, "reconfigure"):
             stream.reconfigure(errors="replace")  # a terminal without '±' is no reason to fail
     try:
         cli.main(arguments, prog_name="mcx", standalone_mode=False)
-        sys.stdout.flush()
     except (InputError, RequestError, Refusal) as trouble:
         _complain(str(trouble))
         sys.exit(WRONG)
@@ -134,9 +172,18 @@ def main(arguments: list[str] | None = None) -> None:
     except (KeyboardInterrupt, click.Abort):
         _complain("interrupted before there was an estimate")
         sys.exit(INTERRUPTED)
-    except BrokenPipeError:  # the reader has read what it wanted
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+    except ReaderGone:  # it has read what it wanted
+        _stop_writing()
         sys.exit(0)
+    except OSError as trouble:  # every file that is read has its own sentence by now
+        _stop_writing()
+        _complain(f"the answer cannot be written: {trouble.strerror or trouble}")
+        sys.exit(WRONG)
+
+
+def _stop_writing() -> None:
+    """What is still waiting for standard output goes nowhere, so that the end of the process cannot fail on it."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
 def _complain(text: str) -> None:

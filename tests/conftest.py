@@ -3,20 +3,23 @@
 from __future__ import annotations
 
 import os
+import signal
 import tempfile
 
 import pytest
-from hypothesis import settings
+from hypothesis import HealthCheck, settings
 
 CACHE = tempfile.TemporaryDirectory(prefix="mcx-tests-")  # compiled once for the run, never the user's
 os.environ.setdefault("NUMBA_CACHE_DIR", CACHE.name)  # before anything imports numba
 
-settings.register_profile("repeatable", derandomize=True, deadline=None, max_examples=50, database=None)
-settings.register_profile("wide", deadline=None, max_examples=1000)
+ANY_SPEED = {"deadline": None, "suppress_health_check": [HealthCheck.too_slow]}  # no test depends on the clock
+settings.register_profile("repeatable", derandomize=True, max_examples=50, database=None, **ANY_SPEED)
+settings.register_profile("wide", max_examples=1000, **ANY_SPEED)
 settings.load_profile(os.environ.get("HYPOTHESIS_PROFILE", "repeatable"))
 
 
 def pytest_configure(config: pytest.Config) -> None:
+    signal.signal(signal.SIGINT, signal.default_int_handler)  # ignored in shells' background jobs; tests press Ctrl-C
     config.addinivalue_line("filterwarnings", "error")
     config.addinivalue_line("markers", "slow: minutes long, run with --slow")
 

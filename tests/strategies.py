@@ -73,6 +73,9 @@ def _grow(draw: st.DrawFn, raw: RawTape, uniforms: list[int]) -> None:
         raw.put(op, draw(flag))
     elif op is Op.SELECT:
         raw.put(op, draw(flag), draw(number), draw(number))
+    elif op is Op.STEP and draw(st.booleans()):  # as a model writes it, drift and deviation from the market
+        leaf = st.sampled_from(raw.numbers[:LEAVES])
+        raw.put(op, raw.put(Op.ADD, draw(number), draw(leaf)), draw(leaf), draw(number))
     elif op in NUMBER_OPS or op in FLAG_OPS:
         raw.put(op, *(draw(number) for _ in range(OPS[op].arity)))
     elif op is Op.EXP:

@@ -116,7 +116,7 @@ def test_drawn_minimum_and_maximum_against_a_fine_grid():
 @pytest.mark.parametrize(("lower", "upper"), [(85.0, 120.0), (95.0, 104.0), (99.9, 150.0), (60.0, 170.0)])
 def test_double_no_touch(lower: float, upper: float):
     """Near and far barriers, one all but at the spot: the probability by quadrature."""
-    text = document("double_touch", kind="no touch", lower=lower, upper=upper, cash=1, watched=ALWAYS, expiry="1y")
+    text = document("double_touch", kind="no touch", lower_barrier=lower, upper_barrier=upper, cash=1, watched=ALWAYS, expiry="1y")
     truth = exp(-0.04) * double_no_touch(lower, upper, **FLAT)
     check(price_of(text + MARKET, 2**21, SEED), truth, sharp=2e-2)
 
@@ -158,7 +158,7 @@ def test_weighing_and_drawing_agree_and_weighing_is_surer(name: str, number: int
 def test_barriers_at_and_beyond_special_levels():
     """A barrier at the spot is touched at once; crossed barriers leave no room; a barrier at the strike is a barrier."""
     def untouched(lower: float, upper: float) -> float:
-        return price_of(document("double_touch", kind="no touch", lower=lower, upper=upper, cash=1, watched=ALWAYS,
+        return price_of(document("double_touch", kind="no touch", lower_barrier=lower, upper_barrier=upper, cash=1, watched=ALWAYS,
                                  expiry="1y") + MARKET, 4096, SEED).mean
 
     assert untouched(100, 130) == untouched(80, 100) == untouched(120, 90) == untouched(100, 100) == 0.0
@@ -364,7 +364,7 @@ def test_what_may_be_read_at_a_hit_is_checked_with_the_definition(old: str, new:
 def test_bounds_stand_beside_the_price(tmp_path: Path):
     """The price of a worst-of is the middle of its bounds, refined until they are as close as was asked; the same seed
     gives the same, whatever the threads, and a record reproduces."""
-    example = (HERE.parent / "payoffs/examples/barrier_reverse_convertible.yaml").read_text().split("---\n")
+    example = (HERE.parent / "payoffs/examples/worst_of_watched.yaml").read_text().split("---\n")
     case, record = tmp_path / "case.yaml", tmp_path / "record.json"
     case.write_text("---\n".join(example[-2:]))
     rough, fine = mcx.price(case, within="20bp", record=record), mcx.price(case, within="2bp")

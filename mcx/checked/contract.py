@@ -83,6 +83,13 @@ class Word:
 TermValue: TypeAlias = DayRef | DayRule | DayList | Stretch | Figures | Word
 
 
+def place_of(value: TermValue, position: int) -> Place:
+    """Where one of a term's dates is written: in its place of a list, at an end of a stretch, else the whole value."""
+    if isinstance(value, Stretch):
+        return (value.start, value.end)[position].place
+    return value.days[position].place if isinstance(value, DayList) and len(value.days) > 1 else value.place
+
+
 @dataclass(frozen=True, slots=True)
 class BusinessDays:
     """Which days are good (`holidays`: a financial calendar's name, or 'none' for weekends only) and how others roll
@@ -95,14 +102,19 @@ class BusinessDays:
 
 @dataclass(frozen=True, slots=True)
 class Contract:
-    """One trade. Exactly one of `notional` and `units` is given. `textbook` contracts use times, others dates."""
+    """One trade. Exactly one of `notional` and `units` is given. `textbook` contracts use times, others dates.
+
+    A contract at fault is handed on as far as it could be read, so that dates and market can be checked in the same
+    round: `at_fault` are the terms without a value that should have one, `framed` is whether assets, start, day count,
+    settlement and calendar are all sound. Where its definition is at fault, `payoff` holds no more than the terms.
+    """
 
     title: str
     currency: str
     assets: tuple[str, ...]
     payoff: Payoff
     terms: dict[str, TermValue]  # optional terms that were not stated are absent; defaults are filled in
-    place: Place
+    place: Place  # of the title
     notional: float | None = None
     units: float | None = None
     start: DayRef | None = None
@@ -112,6 +124,9 @@ class Contract:
     textbook: bool = False
     text: str = ""
     assumptions: tuple[str, ...] = ()
+    at_fault: frozenset[str] = frozenset()
+    framed: bool = True
+    terms_place: Place | None = None  # where a term that is missing would stand
 
     @property
     def size(self) -> float:

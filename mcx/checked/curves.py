@@ -16,7 +16,7 @@ from mcx.checked.reading import check_keys, later_version, read, text_of, value_
 from mcx.checked.values import amount
 from mcx.faults import Fault
 from mcx.text.located import Mapping, Node, Scalar
-from mcx.text.scalars import DATE, date, expected, number, percent, tenor
+from mcx.text.scalars import DATE, date, date_meant, expected, number, percent, tenor
 
 MONTHS = {"month": 1, "year": 12}
 DAYS = {"day": 1, "week": 7}
@@ -207,6 +207,6 @@ def valuation_of(node: Node, faults: list[Fault]) -> tuple[datetime.date | None,
     if isinstance(node, Scalar) and node.text == "0y":
         return None, True
     if isinstance(node, Scalar) and not DATE.fullmatch(node.text):
-        faults.append(expected("the valuation date, or '0y' for textbook contracts", node))
+        faults.append(expected("the valuation date, or '0y' for textbook contracts", node, date_meant(node)))
         return None, False
     return value_of(node, date, faults), False

@@ -12,15 +12,18 @@ from itertools import combinations
 from pathlib import Path
 
 from mcx.checked.contract import Contract
+from mcx.checked.curves import valuation_of
 from mcx.checked.library import Definitions, clashes, stands_for_shipped
 from mcx.checked.market import Market
-from mcx.checked.read_contract import read_contract
+from mcx.checked.read_contract import asset_names, read_contract
 from mcx.checked.read_market import read_market
 from mcx.checked.read_payoff import read_payoff
-from mcx.checked.reading import listed
+from mcx.checked.reading import listed, read, text_of
+from mcx.checked.term_values import DATED_TYPES
+from mcx.checked.values import currency_code
 from mcx.faults import Fault, InputError, Place, did_you_mean
 from mcx.text.documents import read_documents
-from mcx.text.located import Document, Mapping, Node, Sequence
+from mcx.text.located import Document, Mapping, Node
 
 NO_FUNDING = "no issuer funding spread: the amounts are discounted at the market's rates alone"
 
@@ -28,7 +31,7 @@ NO_FUNDING = "no issuer funding spread: the amounts are discounted at the market
 @dataclass(frozen=True, slots=True)
 class Request:
     """What was asked about: contracts in order of the files, the market if one was given, the definitions
-    used or given along, and all documents."""
+    used or given along, and all documents. Beside faults, contracts and market hold what could be read of them."""
 
     contracts: tuple[Contract, ...]
     market: Market | None
@@ -38,12 +41,24 @@ class Request:
 
 @dataclass(frozen=True, slots=True)
 class Pair:
-    """A contract beside the market, with the documents that both come from."""
+    """A contract beside the market, with the documents that both come from.
 
-    contract: Contract
+    `title`, `currency` ('' where it is at fault) and `assets` (none where one is at fault) are known even where the
+    contract's payoff could not be read and `contract` is None.
+    """
+
+    title: str
+    currency: str
+    assets: tuple[str, ...]
+    contract: Contract | None
     market: Market
     contract_body: Mapping
     market_body: Mapping
+
+    def stated(self, key: str) -> tuple[str, ...] | None:
+        """What the market states under a key, sound or not: () if the key is absent, None if that is no mapping."""
+        node = self.market_body.get(key)
+        return node.keys() if isinstance(node, Mapping) else None if node else ()
 
 
 def load(files: Iterable[str | Path]) -> Request:
@@ -55,7 +70,7 @@ def load(files: Iterable[str | Path]) -> Request:
 
 
 def request(files: Iterable[str | Path]) -> tuple[Request, list[Fault]]:
-    """The checked documents of the files as far as they are sound, and every fault found."""
+    """The checked documents of the files as far as they could be read, and every fault found."""
     documents, faults = read_documents(files)
     return checked_request(documents, faults)
 
@@ -74,27 +89,36 @@ def checked_request(
     faults += _only_one_market(kinds.get("market", []))
     faults += _same_title(kinds.get("contract", []))
     used: dict[str, Document] = {}
-    contracts: list[tuple[Contract, Mapping]] = []
+    contracts: list[Contract] = []
+    markets = kinds.get("market", [])
+    market, wrong = read_market(markets[0]) if markets else (None, [])
+    faults += wrong
     for document in kinds.get("contract", []):
         contract, wrong = read_contract(document, definitions)
         faults += wrong
         if contract:
             used[contract.payoff.name] = definitions[contract.payoff.name]
-            contracts.append((_with_origin(contract, used[contract.payoff.name]), document.body))
+            contract = _with_origin(contract, used[contract.payoff.name])
+        if market:
+            pair = _pair(document.body, markets[0].body, contract, market)
+            faults += [fault for check in CROSS_CHECKS for fault in check(pair)]
+        if contract:
+            contracts.append(_with_assumptions(contract, market) if market else contract)
     for document in own:
         if document not in used.values():
             faults += read_payoff(document)[1]
-    market, markets = None, kinds.get("market", [])
-    for document in markets[:1]:
-        market, wrong = read_market(document)
-        faults += wrong
-    if market:
-        pairs = [Pair(contract, market, body, markets[0].body) for contract, body in contracts]
-        faults += [fault for pair in pairs for check in CROSS_CHECKS for fault in check(pair)]
-        contracts = [(_with_assumptions(pair), pair.contract_body) for pair in pairs]
     payoffs = dict.fromkeys((*own, *used.values()))
-    made = Request(tuple(contract for contract, _ in contracts), market, tuple(payoffs), documents)
-    return made, sorted(set(faults))
+    return Request(tuple(contracts), market, tuple(payoffs), documents), sorted(set(faults))
+
+
+def _pair(contract_body: Mapping, market_body: Mapping, contract: Contract | None, market: Market) -> Pair:
+    """A contract beside the market. What is wrong in either by itself has been said."""
+    said: list[Fault] = []
+    return Pair(
+        title=text_of(contract_body, "contract", said),
+        currency=read(contract_body, "currency", currency_code, said) or "",
+        assets=asset_names(contract_body.get("assets"), said),
+        contract=contract, market=market, contract_body=contract_body, market_body=market_body)
 
 
 def _only_one_market(markets: list[Document]) -> list[Fault]:
@@ -126,10 +150,9 @@ def _with_origin(contract: Contract, definition: Document) -> Contract:
     return replace(contract, assumptions=(*contract.assumptions, said))
 
 
-def _with_assumptions(pair: Pair) -> Contract:
+def _with_assumptions(contract: Contract, market: Market) -> Contract:
     """The contract with what is assumed because the market does not say it."""
-    contract = pair.contract
-    if contract.units is None or contract.currency in pair.market.funding:
+    if contract.units is None or contract.currency in market.funding:
         return contract
     return replace(contract, assumptions=(*contract.assumptions, NO_FUNDING))
 
@@ -141,45 +164,50 @@ def _place(body: Mapping, key: str) -> Place:
 
 def one_kind_of_time(pair: Pair) -> list[Fault]:
     """Textbook contracts go with textbook markets, calendar contracts with dated ones."""
-    if pair.contract.textbook == (pair.market.valuation is None):
+    valuation, textbook = valuation_of(pair.market_body.get("market"), [])
+    contract = pair.contract
+    if contract is None or (valuation is None and not textbook) or contract.textbook == textbook:
         return []
-    uses = "times, and needs a market that begins 'market: 0y'" if pair.contract.textbook else \
+    if any(term.type in DATED_TYPES and term.name in contract.at_fault for term in contract.payoff.terms):
+        return []  # the one that cannot be read may settle it
+    uses = "times, and needs a market that begins 'market: 0y'" if contract.textbook else \
         "calendar dates, and needs a market of a date"
-    return [Fault(_place(pair.market_body, "market"), f"'{pair.contract.title}' uses {uses}")]
+    return [Fault(_place(pair.market_body, "market"), f"'{pair.title}' uses {uses}")]
 
 
 def rates_known(pair: Pair) -> list[Fault]:
     """The market has rates for the contract's currency."""
-    currency, rates = pair.contract.currency, pair.market.rates
-    if currency in rates:
+    rates = pair.stated("rates")
+    if not pair.currency or not rates or pair.currency in rates:
         return []
-    text = f"the market has no rates for '{currency}'; it has {listed(rates)}"
+    text = f"the market has no rates for '{pair.currency}'; it has {listed(rates)}"
     return [Fault(_place(pair.contract_body, "currency"), text)]
 
 
 def funding_stated(pair: Pair) -> list[Fault]:
     """A note's funding spread is stated, be it nil."""
-    currency = pair.contract.currency
-    if pair.contract.notional is None or currency in pair.market.funding:
+    currency, funding = pair.currency, pair.stated("funding")
+    if "notional" not in pair.contract_body or not currency or funding is None or currency in funding:
         return []
-    text = (f"no funding spread for '{currency}', the currency of the note '{pair.contract.title}'; write "
+    text = (f"no funding spread for '{currency}', the currency of the note '{pair.title}'; write "
             f"'funding: {{{currency}: 0 bp}}' to value it without the issuer's spread")
     return [Fault(_place(pair.market_body, "funding" if "funding" in pair.market_body else "market"), text)]
 
 
 def assets_known(pair: Pair) -> list[Fault]:
     """Every asset of the contract is in the market, in the contract's currency."""
+    stated = pair.stated("assets")
+    if not stated or not pair.assets:
+        return []
     faults = []
-    nodes = pair.contract_body.get("assets")
-    places = [node.place for node in nodes] if isinstance(nodes, Sequence) else []
-    for name, place in zip(pair.contract.assets, places, strict=True):
+    for name, node in zip(pair.assets, pair.contract_body.get("assets"), strict=True):
         asset = pair.market.assets.get(name)
-        if asset is None:
-            near = did_you_mean(name, pair.market.assets) or f"; it has {listed(pair.market.assets)}"
-            faults.append(Fault(place, f"the market has no asset '{name}'{near}"))
-        elif asset.currency and asset.currency != pair.contract.currency:
-            text = (f"'{name}' is quoted in {asset.currency}, but '{pair.contract.title}' pays in "
-                    f"{pair.contract.currency}; paying in another currency (quanto) is for a later version")
+        if name not in stated:
+            near = did_you_mean(name, stated) or f"; it has {listed(stated)}"
+            faults.append(Fault(node.place, f"the market has no asset '{name}'{near}"))
+        elif asset and asset.currency and pair.currency and asset.currency != pair.currency:
+            text = (f"'{name}' is quoted in {asset.currency}, but '{pair.title}' pays in "
+                    f"{pair.currency}; paying in another currency (quanto) is for a later version")
             faults.append(Fault(asset.place, text))
     return faults
 
@@ -187,19 +215,23 @@ def assets_known(pair: Pair) -> list[Fault]:
 def correlations_known(pair: Pair) -> list[Fault]:
     """Every pair of the contract's assets has its correlation, and together they make a correlation
     matrix."""
-    market, assets = pair.market, pair.contract.assets
-    known = [name for name in assets if name in market.assets]
+    pairs = pair.stated("correlation")
+    known = [name for name in pair.assets if name in (pair.stated("assets") or ())]
+    if pairs is None or len(known) < 2:
+        return []
+    stated = [tuple(part.strip() for part in each.split("/")) for each in pairs]
+    if any(len(names) != 2 or not set(names) <= set(pair.stated("assets")) for names in stated):
+        return []  # a pair that was misspelt is not missing as well
     place = _place(pair.market_body, "correlation" if "correlation" in pair.market_body else "market")
-    missing = [f"{a}/{b}" for a, b in combinations(known, 2)
-               if (a, b) not in market.correlation and (b, a) not in market.correlation]
+    missing = [f"{a}/{b}" for a, b in combinations(known, 2) if (a, b) not in stated and (b, a) not in stated]
     if missing:
         return [Fault(place, f"no correlation for {listed(missing)}")]
-    if len(known) < 3:
+    quoted = pair.market.correlation | {names[::-1]: one for names, one in pair.market.correlation.items()}
+    if len(known) < 3 or any(names not in quoted for names in combinations(known, 2)):
         return []
     from mcx.checked.nearest_correlation import nearest_correlation, smallest_eigenvalue
 
-    stated = market.correlation | {pair[::-1]: quoted for pair, quoted in market.correlation.items()}
-    rows = [[1.0 if a == b else stated[a, b].value for b in known] for a in known]
+    rows = [[1.0 if a == b else quoted[a, b].value for b in known] for a in known]
     smallest = smallest_eigenvalue(rows)
     if smallest >= 0:
         return []

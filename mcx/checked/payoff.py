@@ -10,6 +10,7 @@ from dataclasses import dataclass
 from mcx.checked.formula import Formula
 from mcx.faults import Place
 
+MONEY, MULTIPLES = "money per unit", "multiples of the notional"
 
 @dataclass(frozen=True, slots=True)
 class Term:
@@ -128,7 +129,8 @@ class Event:
 
 @dataclass(frozen=True, slots=True)
 class Payoff:
-    """A definition. `assets` is the fewest and the most assets it takes (most None: any number)."""
+    """A definition. `assets` is the fewest and the most assets it takes (most None: any number); `pays` is what its
+    amounts are, MONEY or MULTIPLES, or '' where it is for the contract to say."""
 
     name: str
     about: str
@@ -138,6 +140,7 @@ class Payoff:
     events: tuple[Event, ...]
     place: Place
     assets: tuple[int, int | None] = (1, None)
+    pays: str = ""
 
     def term(self, name: str) -> Term | None:
         return next((term for term in self.terms if term.name == name), None)

@@ -14,8 +14,9 @@ from types import MappingProxyType
 
 from mcx.checked.contract import BusinessDays, Contract, DayRef, DayRule, Period, TermValue
 from mcx.checked.formula import Formula, Name, walk
-from mcx.checked.payoff import Assign, Pay, Payoff
+from mcx.checked.payoff import MONEY, MULTIPLES, Assign, Pay, Payoff
 from mcx.checked.read_payoff import read_payoff
+from mcx.checked.read_terms import read_terms
 from mcx.checked.reading import (
     check_keys,
     items_of,
@@ -27,7 +28,7 @@ from mcx.checked.reading import (
     text_of,
     value_of,
 )
-from mcx.checked.term_values import TermReader
+from mcx.checked.term_values import DATED_TYPES, TermReader
 from mcx.checked.values import amount, asset_name, currency_code
 from mcx.faults import Fault, did_you_mean
 from mcx.text.located import Document, Mapping, Node, Scalar, Sequence
@@ -58,34 +59,35 @@ DAY_COUNTS: MappingProxyType[str, str] = MappingProxyType({
 def read_contract(
     document: Document, definitions: MappingOf[str, Document]
 ) -> tuple[Contract | None, list[Fault]]:
-    """The contract that a document says, None if anything is wrong with it; `definitions` gives payoffs by
-    name."""
+    """The contract that a document says as far as it could be read (see `Contract`), None where it is not known which
+    terms its payoff has; and what is wrong. `definitions` gives payoffs by name."""
     body, faults = document.body, []
-    check_keys(body, KEYS, REQUIRED, faults, "the contract", LATER)
     size = _size(body, faults)
-    assets = asset_names(body.get("assets"), faults)
-    payoff = _payoff(body, definitions, assets, faults)
-    start = read(body, "start", _start, faults)
-    settlement = read(body, "settlement", _settlement, faults)
-    day_count = read(body, "day_count", _day_count, faults)
-    calendar = _calendar(body.get("calendar"), faults)
-    terms = mapping_of(body.get("terms"), faults, "terms and their values")
-    values, textbook = {}, False
-    if payoff:
-        reader = TermReader(payoff, assets, faults)
-        values = reader.read(terms, body.place)
-        textbook = _is_textbook(reader.written)
-        _check_times(reader.written, textbook, values, faults)
-        _check_calendar_keys(body, textbook, payoff, faults)
     title, currency = text_of(body, "contract", faults), read(body, "currency", currency_code, faults)
-    if faults or payoff is None:
-        return None, faults
+    frame: list[Fault] = []
+    assets = asset_names(body.get("assets"), frame)
+    start = read(body, "start", _start, frame)
+    settlement = read(body, "settlement", _settlement, frame)
+    day_count = read(body, "day_count", _day_count, frame)
+    calendar = _calendar(body.get("calendar"), frame)
+    payoff = _payoff(body, definitions, assets, faults)
+    terms = mapping_of(body.get("terms"), faults, "terms and their values")
+    if payoff is None:
+        check_keys(body, KEYS, REQUIRED, faults, "the contract", LATER)
+        return None, faults + frame
+    _check_size(body, payoff, faults)
+    reader = TermReader(payoff, assets, faults)
+    values = reader.read(terms, body.place)
+    textbook = _is_textbook(reader.written)
+    _check_times(reader.written, textbook, values, faults)
+    _check_keys(body, _is_dated(body, textbook, reader), payoff, frame)
     return Contract(
-        title=title, currency=currency, assets=assets, payoff=_begun(payoff, values), terms=values,
+        title=title, currency=currency or "", assets=assets, payoff=_begun(payoff, values), terms=values,
         place=body.get("contract").place, notional=size.get("notional"), units=size.get("units"), start=start,
         day_count=day_count or "", settlement=settlement, calendar=calendar, textbook=textbook,
-        text=document.text,
-    ), []
+        text=document.text, terms_place=(terms or body).place, at_fault=reader.at_fault,
+        framed=not frame and (textbook or (start and settlement and calendar) is not None),
+    ), faults + frame
 
 
 def asset_names(node: Node | None, faults: list[Fault]) -> tuple[str, ...]:
@@ -111,15 +113,23 @@ def _size(body: Mapping, faults: list[Fault]) -> dict[str, float]:
     two = "'notional' (payments are multiples of it) or 'units' (payments are money per unit)"
     if len(stated) == 2:
         faults.append(Fault(body.key("units").place, f"a contract has {two}, not both"))
-    elif not stated:
+    elif not stated and not _is_meant(body, "notional", "units"):
         faults.append(Fault(body.place, f"{two} is missing in the contract"))
     return {key: read(body, key, amount, faults) for key in stated}
+
+
+def _check_size(body: Mapping, payoff: Payoff, faults: list[Fault]) -> None:
+    """Money per unit times a notional, or a multiple of the notional times a number of units, is no amount at all."""
+    wrong, right = {MONEY: ("notional", "units"), MULTIPLES: ("units", "notional")}.get(payoff.pays, ("", ""))
+    if wrong in body and right not in body:
+        text = f"'{payoff.name}' pays {payoff.pays}, which goes with '{right}', not with '{wrong}'"
+        faults.append(Fault(body.key(wrong).place, text))
 
 
 def _payoff(
     body: Mapping, definitions: MappingOf[str, Document], assets: tuple[str, ...], faults: list[Fault]
 ) -> Payoff | None:
-    """The definition that the contract names, checked for its assets."""
+    """The definition that the contract names, checked for its assets; without events where it is at fault."""
     name = read(body, "payoff", word, faults)
     if name is None:
         return None
@@ -129,7 +139,9 @@ def _payoff(
         return None
     payoff, wrong = read_payoff(definitions[name], assets=len(assets) or None, asset_names=assets)
     faults += wrong
-    if payoff and assets:
+    if payoff is None:
+        return _terms_alone(definitions[name])
+    if assets:
         fewest, most = payoff.assets
         if len(assets) < fewest or (most is not None and len(assets) > most):
             wanted = f"{fewest} or more" if most is None else f"{fewest}"
@@ -137,6 +149,14 @@ def _payoff(
             faults.append(Fault(body.get("assets").place, text))
             return None
     return payoff
+
+
+def _terms_alone(definition: Document) -> Payoff | None:
+    """The terms of a definition that is at fault elsewhere, so that their values can be read all the same."""
+    said: list[Fault] = []
+    terms = read_terms(definition.body.get("terms"), said)
+    name = definition.body.get("payoff")
+    return None if said else Payoff(name.text, "", terms, (), (), (), name.place)
 
 
 def _start(node: Node) -> DayRef | Fault:
@@ -204,21 +224,32 @@ def _unfit_rule(rule: DayRule, textbook: bool) -> str:
     return ""
 
 
-def _check_calendar_keys(body: Mapping, textbook: bool, payoff: Payoff, faults: list[Fault]) -> None:
-    """Start, settlement and calendar stand in calendar contracts, and in no other; the day count where it
-    is used."""
-    if textbook:
+def _is_dated(body: Mapping, textbook: bool, reader: TermReader) -> bool:
+    """Whether the keys of a contract with calendar dates are asked for: not where the terms say times, nor where they
+    say nothing that can be read and none of these keys is there."""
+    if reader.written or any(key in body for key in CALENDAR_KEYS):
+        return not textbook
+    return not any(term.type in DATED_TYPES and term.name in reader.at_fault for term in reader.payoff.terms)
+
+
+def _check_keys(body: Mapping, dated: bool, payoff: Payoff, faults: list[Fault]) -> None:
+    """The keys of the contract: start, settlement and calendar stand in calendar contracts, and in no other; the day
+    count where it is used."""
+    check_keys(body, KEYS, (*REQUIRED, *(("start", "settlement", "calendar") if dated else ())), faults, "the contract",
+               LATER)
+    if not dated:
         for key in CALENDAR_KEYS:
             if key in body:
                 text = f"'{key}' belongs to contracts with calendar dates; this one uses times"
                 faults.append(Fault(body.key(key).place, text))
-        return
-    for key in ("start", "settlement", "calendar"):
-        if key not in body:
-            faults.append(Fault(body.place, f"'{key}' is missing in the contract"))
-    if "day_count" not in body and _uses_period(payoff):
+    elif "day_count" not in body and _uses_period(payoff) and not _is_meant(body, "day_count"):
         text = f"'day_count' is missing in the contract: '{payoff.name}' pays by 'period'"
         faults.append(Fault(body.place, text))
+
+
+def _is_meant(body: Mapping, *keys: str) -> bool:
+    """Whether a key of the contract that is not known is near one of these."""
+    return any(did_you_mean(key, keys) for key in body.keys() if key not in KEYS)
 
 
 def _uses_period(payoff: Payoff) -> bool:

@@ -26,8 +26,8 @@ ASSET_LATER = ("dividends", "quanto", "adjustments", "fixings", "borrow", "strik
 UNCERTAIN = ("rates", "funding", "spot", "yield", "forwards", "vol", "correlation")
 
 
-def read_market(document: Document) -> tuple[Market | None, list[Fault]]:
-    """The market that a document says, None if anything is wrong with it."""
+def read_market(document: Document) -> tuple[Market, list[Fault]]:
+    """The market that a document says, without what is at fault in it; and what is wrong."""
     body, faults = document.body, []
     valuation, textbook = valuation_of(body.get("market"), faults)
     reader = MarketReader(valuation, textbook, faults)
@@ -44,7 +44,7 @@ def read_market(document: Document) -> tuple[Market | None, list[Fault]]:
         uncertainty=_uncertainty(reader, body.get("uncertainty")), place=body.get("market").place,
         source=text_of(body, "source", faults), as_of=text_of(body, "as_of", faults), keys=body.keys(),
     )
-    return (None if faults else market), faults
+    return market, faults
 
 
 def _each(mapping: Mapping, parse: Callable[[Scalar, Node], T | None]) -> dict[str, T]:

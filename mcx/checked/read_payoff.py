@@ -13,16 +13,16 @@ from mcx.checked.at_the_hit import hit_faults
 from mcx.checked.formula import Formula
 from mcx.checked.kinds import Kind
 from mcx.checked.names import Names, in_order
-from mcx.checked.payoff import Let, Payoff, Running, Term
+from mcx.checked.payoff import MONEY, MULTIPLES, Let, Payoff, Running, Term
 from mcx.checked.read_events import EventReader
 from mcx.checked.read_terms import few_enough, read_terms, sound_name
-from mcx.checked.reading import check_keys, listed, mapping_of, read, text_of
+from mcx.checked.reading import check_keys, listed, mapping_of, one_of, read, text_of
 from mcx.checked.formula_syntax import names_in
 from mcx.faults import Fault
 from mcx.text.located import Document, Mapping, Node, Scalar
 from mcx.text.scalars import expected, word
 
-KEYS = ("about", "assets", "terms", "let", "running")
+KEYS = ("about", "assets", "pays", "terms", "let", "running")
 HOWS = ("average", "total", "product", "lowest", "highest", "ever", "always", "latest")
 OF_FLAGS = ("ever", "always")
 OF_EITHER = ("total", "latest")
@@ -43,6 +43,7 @@ def read_payoff(
     check_keys(body, KEYS, ("payoff", "events"), faults, "the payoff")
     name, about = read(body, "payoff", _name, faults), text_of(body, "about", faults)
     fewest, most = read(body, "assets", _assets, faults) or (1, None)
+    pays = one_of(body.get("pays"), (MONEY, MULTIPLES), faults, "what its amounts are") if "pays" in body else ""
     terms = read_terms(body.get("terms"), faults)
     count = max(fewest, min(assets or 1, most or assets or 1))  # out of range is the contract's fault, not ours
     reader = _Reader(body, terms, count == 1, asset_names if assets else None)
@@ -54,7 +55,7 @@ def read_payoff(
     if faults:
         return None, faults
     place = body.get("payoff").place
-    return Payoff(name, about, terms, lets, running, events, place, (fewest, most)), []
+    return Payoff(name, about, terms, lets, running, events, place, (fewest, most), pays), []
 
 
 def _name(node: Node) -> str | Fault:

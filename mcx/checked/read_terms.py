@@ -66,7 +66,8 @@ def _term(key: Scalar, node: Node, schedules: list[str], faults: list[Fault]) ->
         return None
     _refuse_keys(node, kind, faults)
     bounds = _bounds(node, kind, faults)
-    optional = read(node, "optional", flag, faults) or False
+    # Where it cannot be read it was meant to be optional: else every `given` of the term would be at fault as well.
+    optional = "optional" in node and read(node, "optional", flag, faults) is not False
     if optional and "default" in node:
         faults.append(Fault(node.key("default").place, f"{what} is optional and has a default; keep one of the two"))
     term = Term(

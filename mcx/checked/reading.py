@@ -26,11 +26,14 @@ def check_keys(
 ) -> bool:
     """Unknown, missing and later keys of a mapping, which messages call `what` ("the contract"); True if all is well.
 
-    `allowed` need not repeat the required keys. `later` are keys of a later version, refused by name.
+    `allowed` need not repeat the required keys. `later` are keys of a later version, refused by name. For an unknown
+    key one is offered that does not stand there already, else all that are missing, else all there are.
     """
     before = len(faults)
     required, later = tuple(required), tuple(later)
     known = dict.fromkeys((*required, *allowed))
+    free = [key for key in known if key not in mapping]
+    missing = [key for key in required if key not in mapping]
     meant = set()  # a key that was misspelt is not missing as well
     for key, _ in mapping.entries:
         if key.text in known:
@@ -38,7 +41,7 @@ def check_keys(
         if key.text in later:
             faults.append(later_version(key, f"'{key.text}' is a key"))
             continue
-        near = offered(key.text, known)
+        near = did_you_mean(key.text, free) or offered("", missing or known)
         meant |= {name for name in required if near == f"; did you mean '{name}'?"}
         faults.append(Fault(key.place, f"'{shortened(key.text)}' is not a key of {what}{near}"))
     for key in required:

@@ -15,13 +15,16 @@ from mcx.checked.reading import check_keys, listed, offered, one_of, value_of
 from mcx.checked.values import amount
 from mcx.faults import Fault, Place, did_you_mean
 from mcx.text.located import Mapping, Node, Scalar, Sequence
-from mcx.text.scalars import DATE, SPAN, date, expected, flag, number, percent, period, shown, time
+from mcx.text.scalars import DATE, SPAN, date, date_meant, expected, flag, number, percent, period, shown, time
 
 DATED_TYPES = ("date", "dates", "watch")
 REFERENCE = re.compile(r"([A-Za-z_]\w*)(?:\.(\w+))?")
 ONE_OF_MANY = ("first", "last")
 SOME_OF_MANY = (*ONE_OF_MANY, "but_first", "but_last")
 A_DATE = "a date such as '2026-11-16', a time such as '0.25y' or the name of another date term"
+SOME_DATES = ("dates such as '[2026-11-16, 2027-05-17]', a rule such as '{from: 2026-11-16, until: 2027-11-16, "
+              "every: 3 months}', or the name of another date term")
+A_WATCH = "dates, a rule of dates, the name of another date term, or '{continuous: [from, until]}'"
 MOST_STEPS = 10_000
 NUMERIC: dict[str, Callable[[Node], float | Fault]] = {"number": number, "percent": percent, "level": amount}
 
@@ -33,19 +36,23 @@ class TermReader:
         self.payoff, self.assets, self.faults = payoff, assets, faults
         self.nodes: dict[str, Node] = {}  # of the terms stated, and the defaults
         self.written: list[DayRef] = []  # dates and times written out, not those named
+        self.at_fault: frozenset[str] = frozenset()  # terms without a value that have, or may have, one
 
     def read(self, mapping: Mapping | None, place: Place) -> dict[str, TermValue]:
         """The values by name: those stated, and defaults. Optional terms that are not stated are absent."""
         terms = self.payoff.terms
         mapping = mapping or Mapping((), place)
         needed = [term.name for term in terms if not term.optional and term.default is None]
-        check_keys(mapping, [term.name for term in terms], needed, self.faults,
-                   f"the terms of '{self.payoff.name}'")
+        known = [term.name for term in terms]
+        check_keys(mapping, known, needed, self.faults, f"the terms of '{self.payoff.name}'")
         defaults = {term.name: term.default for term in terms if term.default is not None}
         self.nodes = defaults | {name.text: node for name, node in mapping.entries}
         stated = [term for term in terms if term.name in self.nodes]
         values = {term.name: self.value(term, self.nodes[term.name]) for term in stated}
-        return {name: value for name, value in values.items() if value is not None}
+        found = {name: value for name, value in values.items() if value is not None}
+        meant = {*needed, *values} if set(mapping.keys()) <= set(known) else set(known)  # what was misspelt may be any
+        self.at_fault = frozenset(meant - set(found))
+        return found
 
     def value(self, term: Term, node: Node) -> TermValue | None:
         """The value of one term; None and a fault where it is wrong."""
@@ -131,7 +138,7 @@ class TermReader:
                 self.faults.append(expected("one date or more", node, "the list is empty"))
             return None if None in days or not days else DayList(node.place, tuple(days))
         if isinstance(node, Scalar):
-            day = self._day(node, many=True)
+            day = self._day(node, many=True, what=A_WATCH if term.type == "watch" else SOME_DATES)
             return None if day is None else DayList(node.place, (day,))
         if "continuous" in node and term.type == "watch":
             return self._stretch(term, node)
@@ -186,8 +193,8 @@ class TermReader:
             return None
         return Period(*value)
 
-    def _day(self, node: Node, many: bool = False) -> DayRef | None:
-        """A single date, or, with `many`, also all dates of a term or all but one."""
+    def _day(self, node: Node, many: bool = False, what: str = A_DATE) -> DayRef | None:
+        """A single date, or, with `many`, also all dates of a term or all but one; `what` is expected."""
         found = REFERENCE.fullmatch(node.text) if isinstance(node, Scalar) else None
         if isinstance(node, Scalar) and DATE.fullmatch(node.text):
             value = value_of(node, date, self.faults)
@@ -196,19 +203,19 @@ class TermReader:
             value = value_of(node, time, self.faults)
             ref = None if value is None else DayRef(node.place, time=value)
         elif found:
-            return self._named(node, found[1], found[2] or "", many)
+            return self._named(node, found[1], found[2] or "", many, what)
         else:
-            self.faults.append(expected(A_DATE, node))
+            self.faults.append(expected(what, node, date_meant(node)))
             return None
         self.written += [ref] if ref else []
         return ref
 
-    def _named(self, node: Scalar, name: str, part: str, many: bool) -> DayRef | None:
+    def _named(self, node: Scalar, name: str, part: str, many: bool, what: str) -> DayRef | None:
         """A date given through another term."""
         dated = {term.name: term for term in self.payoff.terms if term.type in DATED_TYPES}
         wrong = ""
         if name not in dated:
-            self.faults.append(expected(A_DATE, node, did_you_mean(name, dated).removeprefix("; ")))
+            self.faults.append(expected(what, node, did_you_mean(name, dated).removeprefix("; ")))
             return None
         told = self.nodes.get(name)
         if told is None:

@@ -11,9 +11,9 @@ import datetime
 import math
 from dataclasses import replace
 
-from mcx.checked.contract import Contract, DayList, DayRef, Figures, Stretch
+from mcx.checked.contract import Contract, DayRef, Figures, Stretch, place_of
 from mcx.checked.payoff import At, Continuous, Event, Pay, Running
-from mcx.checked.term_values import DATED_TYPES
+from mcx.checked.term_values import DATED_TYPES, NUMERIC
 from mcx.dates.business_days import GoodDays, NotCovered, good_days
 from mcx.dates.dated_contract import Day, DatedContract, DatedEvent, DatedHit, Moment, Occasion, Update, Watch
 from mcx.dates.day_counts import YEAR_FRACTIONS
@@ -30,20 +30,22 @@ def date_contract(
     """The contract with every date known, and the faults that only dates can show.
 
     Times are years from `valuation`; without one, from the contract's start. Optional date terms that are not
-    stated narrow nothing, and nothing happens at them.
+    stated narrow nothing, and nothing happens at them. A contract at fault gives no dated one, but the faults of the
+    dates that can be read in it.
     """
     good, faults = good_days(contract.calendar) if contract.calendar else (None, [])
-    if faults:
+    if faults or not (contract.framed or contract.textbook):
         return None, faults
     base = None if contract.textbook else valuation or contract.start.date
     terms = TermDays(contract, base, good)
-    schedules = {term.name: terms.of_term(term.name) for term in contract.payoff.terms
-                 if term.type in DATED_TYPES and term.name in contract.terms}
-    faults = terms.faults + _wrong_lengths(contract, schedules)
-    if faults:
-        return None, faults
+    dated_terms = [term.name for term in contract.payoff.terms if term.type in DATED_TYPES]
+    found = {name: terms.of_term(name) for name in dated_terms if name in contract.terms}
+    schedules = {name: days for name, days in found.items() if days}
+    unread = frozenset(name for name in dated_terms if name in contract.at_fault or found.get(name) == ())
     start = Day(0.0) if contract.textbook else terms.day(contract.start.date)
-    return _Dating(contract, valuation, schedules, start, terms, good).dated()
+    dated, faults = _Dating(contract, valuation, schedules, unread, start, terms, good).dated()
+    faults += terms.faults + _wrong_lengths(contract, schedules)
+    return (None if faults or contract.at_fault else dated), sorted(set(faults))
 
 
 def _wrong_lengths(contract: Contract, schedules: dict[str, tuple[Day, ...]]) -> list[Fault]:
@@ -54,7 +56,7 @@ def _wrong_lengths(contract: Contract, schedules: dict[str, tuple[Day, ...]]) ->
         if isinstance(value, Figures) and value.per_date:
             count, what = len(value.rows), "numbers"
         elif term.type == "dates" and term.per in contract.terms and value is not None:
-            count, what = len(schedules[term.name]), "dates"
+            count, what = len(schedules.get(term.name, ())), "dates"
         else:
             continue
         if schedule and count and count != len(schedule):
@@ -78,9 +80,10 @@ class _Dating:
     """One contract on its way to a dated one; collects faults as it goes."""
 
     def __init__(self, contract: Contract, valuation: datetime.date | None,
-                 schedules: dict[str, tuple[Day, ...]], start: Day, terms: TermDays, good: GoodDays | None):
+                 schedules: dict[str, tuple[Day, ...]], unread: frozenset[str], start: Day, terms: TermDays,
+                 good: GoodDays | None):
         self.contract, self.payoff, self.valuation = contract, contract.payoff, valuation
-        self.schedules, self.start, self.terms, self.good = schedules, start, terms, good
+        self.schedules, self.unread, self.start, self.terms, self.good = schedules, unread, start, terms, good
         self.positions = _positions(contract, schedules)
         self.faults: list[Fault] = []
         self.assumptions: list[str] = []
@@ -88,6 +91,8 @@ class _Dating:
         self.events: dict[Day, list[DatedEvent]] = {}
         self.watches: list[Watch] = []
         self.hits: list[DatedHit] = []
+        self.past: dict[str, set[int]] = {}  # positions in the schedule of each term
+        self.unwatched = False  # whether a watch is at fault, so that its running value has no date
 
     def dated(self) -> tuple[DatedContract | None, list[Fault]]:
         self._refuse_dates_before_start()
@@ -96,10 +101,11 @@ class _Dating:
         for event in self.payoff.events:
             self._happen(event)
         days = sorted({*self.updates, *self.events}, key=lambda day: day.time)
+        self._refuse_past()
+        if not self._can_be_read():
+            return None, self.faults
         if not days and not self.hits and not self.faults:
             self._fault(self.contract.place, "nothing is ever observed or paid: no event has a date")
-        if self.faults:
-            return None, self.faults
         dated = DatedContract(
             contract=self.contract, valuation=self.valuation, start=self.start, schedules=self.schedules,
             moments=tuple(Moment(day, tuple(self.updates.get(day, ())), tuple(self.events.get(day, ())))
@@ -107,7 +113,14 @@ class _Dating:
             watches=tuple(self.watches), calendar_version=self.good.version if self.good else "",
             assumptions=(*self.contract.assumptions, *dict.fromkeys(self.assumptions)), hits=tuple(self.hits))
         live, idle, faults = readings(dated)
+        faults += self.faults
         return (None if faults else _only(dated, live, idle)), faults
+
+    def _can_be_read(self) -> bool:
+        """Whether all that decides which formulas are read is known: every term but numbers that must be stated."""
+        at_fault = [term for term in self.payoff.terms if term.name in self.contract.at_fault | self.unread]
+        numbers = all(term.type in NUMERIC and not term.optional for term in at_fault)
+        return self.contract.framed and bool(self.payoff.events) and not self.unwatched and numbers
 
     def _fault(self, place: Place, text: str) -> None:
         fault = Fault(place, text)
@@ -117,18 +130,22 @@ class _Dating:
     def _refuse_dates_before_start(self) -> None:
         for name, days in self.schedules.items():
             if days[0].time < self.start.time:
-                self._fault(self.contract.terms[name].place,
+                self._fault(place_of(self.contract.terms[name], 0),
                             f"{days[0]} lies before the contract's start {self.start}")
 
-    def _is_past(self, day: Day, name: str, what: str) -> bool:
-        """Whether a day is before the valuation date; then that is a fault of the term that gave it."""
-        if self.valuation is None or day.time >= 0:
-            return False
-        if day.time >= self.start.time:  # else that is the fault already
-            self._fault(self.contract.terms[name].place,
-                        f"{what}{day} lies before the valuation date {self.valuation}; a seasoned trade "
-                        "needs fixings, which a later version reads")
-        return True
+    def _is_past(self, day: Day) -> bool:
+        """Whether a day is before the valuation date; one before the start is at fault already."""
+        return self.valuation is not None and self.start.time <= day.time < 0
+
+    def _refuse_past(self) -> None:
+        """Days before the valuation date on which something happens: one fault for each term that gives them."""
+        for name, positions in self.past.items():
+            days = [self.schedules[name][k] for k in sorted(positions)]
+            few = f"{days[0]} lies" if len(days) == 1 else f"{len(days)} dates, {days[0]} to {days[-1]}, lie"
+            what = "the start of the watch " if isinstance(self.contract.terms[name], Stretch) else ""
+            self._fault(place_of(self.contract.terms[name], min(positions)),
+                        f"{what}{few} before the valuation date {self.valuation}; a seasoned trade needs fixings, "
+                        "which a later version reads")
 
     def _observe(self, running: Running) -> None:
         """The days of a running value: updates on dates, or a continuous watch."""
@@ -140,10 +157,13 @@ class _Dating:
             return
         value = self.contract.terms.get(at.name)
         if isinstance(value, Stretch):
+            if at.name in self.unread:
+                return
             if running.how not in WATCHABLE:
                 text = (f"'{running.name}' is the {running.how} of what it observes and cannot be watched "
                         f"continuously; {', '.join(WATCHABLE)} can")
                 self._fault(value.place, text)
+                self.unwatched = True
             else:
                 self._watch(running, *self.schedules[at.name], at.name, value.place)
             return
@@ -156,7 +176,10 @@ class _Dating:
             return
         if end.time <= start.time:
             self._fault(place, f"the watch ends on {end}, not after its start on {start}")
-        elif not self._is_past(start, name, "the start of the watch "):
+            self.unwatched = True
+        else:
+            if self._is_past(start):
+                self.past.setdefault(name, set()).add(self.schedules[name].index(start))
             self.watches.append(Watch(running, start, end))
 
     def _end(self, at: At) -> Day | None:
@@ -172,10 +195,10 @@ class _Dating:
                 self._hit(event, watch)
                 return
             at = next(running.at for running in self.payoff.running if running.name == at.name)
-            if isinstance(at, Continuous):  # one of its dates is not stated
-                return
+            if isinstance(at, Continuous) or isinstance(self.contract.terms.get(at.name), Stretch):
+                return  # one of its dates is not stated, or at fault
         occasions = self._occasions(at, event.since, event.until)
-        if not occasions and event.at.name in self.schedules:
+        if not occasions and event.at.name in self.schedules and not {event.since, event.until} & self.unread:
             dates = f"'{event.at.name}.{event.at.part}'" if event.at.part else f"'{event.at.name}'"
             dates += f" from '{event.since}'" if event.since else ""
             dates += f" until '{event.until}'" if event.until else ""
@@ -198,7 +221,7 @@ class _Dating:
         days = tuple(self.terms.day(watch.start.date + datetime.timedelta(days=k)) for k in range(length + 1))
         due = {}
         for pay in pays:
-            if pay.due == "same day":
+            if pay.due == "same day" or pay.due in self.unread:
                 due[pay] = days
             elif pay.due in self.schedules:
                 self._refuse_before(pay, watch.end, self.schedules[pay.due][0])
@@ -209,20 +232,24 @@ class _Dating:
 
     def _refuse_before(self, pay: Pay, day: Day, due: Day) -> None:
         if due.time < day.time:
-            self._fault(self.contract.terms[pay.due].place,
+            self._fault(place_of(self.contract.terms[pay.due], 0),
                         f"the payment of what is watched until {day} falls due before, on {due}")
 
     def _occasions(self, at: At, since: str = "", until: str = "") -> list[Occasion]:
         """The dates of a schedule, or the part of them that is meant, numbered as in the whole schedule."""
         days = self.schedules.get(at.name, ())
+        if {at.name, since, until} & self.unread:
+            return []
         single = isinstance(self.contract.terms.get(at.name), DayRef)
         first = self.schedules[since][0].time if since in self.schedules else -math.inf
         last = self.schedules[until][0].time if until in self.schedules else math.inf
         found: list[Occasion] = []
         for k in part_of(range(len(days)), at.part):
             day = days[k]
-            if not first <= day.time <= last or self._is_past(day, at.name, ""):
+            if not first <= day.time <= last:
                 continue
+            if self._is_past(day):
+                self.past.setdefault(at.name, set()).add(k)
             found.append(Occasion(
                 day=day, schedule="" if single else at.name, nth=k + 1, n_dates=len(days),
                 period=self._fraction(days[k - 1] if k else self.start, day),
@@ -241,6 +268,8 @@ class _Dating:
         day = occasion.day
         if pay.due == "same day":
             return day
+        if pay.due in self.unread:
+            return day
         if pay.due not in self.schedules:
             return self._after_lag(day)
         term = self.payoff.term(pay.due)
@@ -249,12 +278,12 @@ class _Dating:
             self._fault(pay.place, f"'{pay.due}' has one date for each date of '{term.per}', and {day} is "
                                    "none of them")
             return day
+        if position >= len(self.schedules[pay.due]):  # a list that is too short is the fault already
+            return day
         due = self.schedules[pay.due][position]
         if due.time < day.time:
-            value = self.contract.terms[pay.due]
-            listed = isinstance(value, DayList) and len(value.days) > 1
-            place = value.days[position].place if listed else value.place
-            self._fault(place, f"the payment of what is observed on {day} falls due before, on {due}")
+            self._fault(place_of(self.contract.terms[pay.due], position),
+                        f"the payment of what is observed on {day} falls due before, on {due}")
         return due
 
     def _after_lag(self, day: Day) -> Day:

@@ -1,9 +1,9 @@
 """What formulas read on their dates: every name must have its value when it is asked for.
 
 Since all dates are known, this is decided before anything is drawn. The walk below follows the moments in
-order, knows which running values have begun, and of each conditional that the terms settle reads only the
-branch that is taken. What it finds is kept by reader (an event or a running value), so that running values
-that nothing reads can be left out.
+order, knows which running values have begun and which are the same on every path (counts of days, say), and of
+each conditional that the terms settle reads only the branch that is taken. What it finds is kept by reader (an
+event or a running value), so that running values that nothing reads can be left out.
 """
 
 from __future__ import annotations
@@ -14,7 +14,7 @@ from collections.abc import Callable
 from dataclasses import dataclass, field
 from types import MappingProxyType
 
-from mcx.checked.contract import Contract, Figures, Word
+from mcx.checked.contract import Contract, Figures, Word, place_of
 from mcx.checked.formula import (
     Binary,
     Call,
@@ -29,8 +29,8 @@ from mcx.checked.formula import (
     Unary,
     children,
 )
-from mcx.checked.payoff import Assign, At, End, Event, Pay, Running
-from mcx.dates.dated_contract import DatedContract, DatedEvent, Occasion
+from mcx.checked.payoff import Action, Assign, At, End, Event, Pay, Running
+from mcx.dates.dated_contract import Day, DatedContract, DatedEvent, Occasion
 from mcx.faults import Fault, Place
 
 KNOWN_OF_DATE = ("nth", "n_dates", "years", "period")
@@ -42,20 +42,40 @@ ARITHMETIC: MappingProxyType[str, Callable[[float, float], float]] = MappingProx
 UNUSED_MATTERS = ("number", "percent", "level", "choice", "flag", "asset")
 
 
+@dataclass(frozen=True, slots=True)
+class Reading:
+    """A running value read on a day, by a formula at a place; `schedule` names the dates term that gave the day."""
+
+    day: Day
+    schedule: str
+    place: Place
+
+
 @dataclass(slots=True)
 class Seen:
-    """What one event or running value read: names of terms and running values, and what was wrong, by
-    name."""
+    """What one event or running value read: names of terms, running values each with its last reading, and what was
+    wrong, by name."""
 
     terms: set[str] = field(default_factory=set)
-    running: set[str] = field(default_factory=set)
+    running: dict[str, Reading] = field(default_factory=dict)
     wrong: dict[str, Fault] = field(default_factory=dict)
+
+    def add(self, other: Seen) -> None:
+        """All that another has seen; of readings of one value the later one."""
+        self.terms |= other.terms
+        self.wrong = other.wrong | self.wrong
+        for name, reading in other.running.items():
+            self.reads(name, reading)
+
+    def reads(self, name: str, reading: Reading) -> None:
+        if name not in self.running or reading.day.time >= self.running[name].day.time:
+            self.running[name] = reading
 
 
 def readings(dated: DatedContract) -> tuple[frozenset[str], frozenset[Place], list[Fault]]:
     """The running values that payments depend on, the events at hits that the terms rule out, and the faults of
-    reading: names without a value where they are read, and optional terms that the contract states but nothing
-    reads."""
+    reading: names without a value where they are read, divisions by 0, observations after the last reading, and
+    optional terms that the contract states but nothing reads."""
     walk = _Walk(dated)
     walk.along()
     payoff = dated.contract.payoff
@@ -64,14 +84,32 @@ def readings(dated: DatedContract) -> tuple[frozenset[str], frozenset[Place], li
     counted = Seen()
     while queue:
         seen = queue.pop()
-        counted.terms |= seen.terms
-        counted.wrong |= {name: fault for name, fault in seen.wrong.items() if name not in counted.wrong}
+        counted.add(seen)
         for running in payoff.running:
             if running.name in seen.running and running.name not in live:
                 live.add(running.name)
                 queue += [walk.seen[running.place]] if running.place in walk.seen else []
     faults = list(counted.wrong.values()) or _never_read(dated.contract, counted.terms)
+    begun = {name: reading for name, reading in counted.running.items() if name not in counted.wrong}
+    faults += _seen_in_vain(dated.contract, begun, walk.observed)
     return frozenset(live), frozenset(walk.idle), sorted(faults)
+
+
+def _seen_in_vain(
+    contract: Contract, read: dict[str, Reading], observed: dict[str, tuple[Day, At, int]]
+) -> list[Fault]:
+    """Running values that are observed after they were read last, on dates that the contract gave them alone: an
+    average or a watch that runs past the payment is a slip of a date. A value that is read on some dates only of the
+    schedule that it is observed on is the definition's own making."""
+    faults = []
+    for name, (day, at, position) in observed.items():
+        reading = read.get(name)
+        if reading is None or day.time <= reading.day.time or at.name == reading.schedule:
+            continue
+        text = (f"'{name}' is observed until {day}, but read for the last time on {reading.day} ({reading.place}); "
+                f"expected no date of '{at.name}' after that")
+        faults.append(Fault(place_of(contract.terms[at.name], position), text))
+    return faults
 
 
 def _never_read(contract: Contract, read: set[str]) -> list[Fault]:
@@ -94,6 +132,8 @@ class _Walk:
         self.order = {name: k for k, name in enumerate(self.running)}
         self.terms = {term.name: term for term in payoff.terms}
         self.ready = {running.name for running in payoff.running if running.start is not None}
+        self.known: dict[str, float] = {}  # running values that are the same on every path
+        self.observed: dict[str, tuple[Day, At, int]] = {}  # the last date of each, by which term, where in its value
         self.seen: dict[Place, Seen] = {}
         self.remembered: dict[tuple[Place, Place], Seen] = {}  # what each `previous` read on the date before
         self.occasion: Occasion | None = None
@@ -105,10 +145,15 @@ class _Walk:
         for running in self.running.values():
             if running.start is not None:
                 self._look(running, None)
-                self._read(running.start)
+                value = self._read(running.start)
+                self._learn(running.name, value if running.how in ("set", "total") else None)
+            elif running.how == "total":
+                self.known[running.name] = 0.0
         for watch in self.dated.watches:
             self._look(watch.running, None)
             self._read(watch.running.formula)
+            at = watch.running.at
+            self.observed[watch.running.name] = watch.end, at if isinstance(at, At) else at.end, -1
         for hit in self.dated.hits:
             day = hit.watch.end
             self._happen(DatedEvent(hit.event, Occasion(day, "", 1, 1, math.nan, day.time, {}), {}))
@@ -117,9 +162,10 @@ class _Walk:
                 self._begin_watches(moment.day.time, self.order[update.running.name])
                 self._look(update.running, update.occasion)
                 fresh = self._memory(update.running.formula)
-                self._read(update.running.formula)
+                value = self._read(update.running.formula)
+                self._update(update.running, value)
+                self.observed[update.running.name] = moment.day, update.running.at, update.occasion.nth - 1
                 self.remembered |= fresh
-                self.ready.add(update.running.name)
             self._begin_watches(moment.day.time, len(self.order))
             if any(self._happen(event) for event in moment.events):  # after an end nothing is read
                 break
@@ -143,21 +189,42 @@ class _Walk:
         if once and holds == 0.0 and not event.otherwise:
             self.idle.add(event.place)
         elif once:
-            self.owner.running.add(event.at.name)
+            occasion = dated_event.occasion
+            self.owner.reads(event.at.name, Reading(occasion.day, occasion.schedule, event.at.place))
         fresh = self._memory(*_formulas(event))
-        taken = [*event.then] if holds is None or holds else []
-        taken += [] if holds else event.otherwise
-        for action in taken:
+        before = self.known
+        after = [self._act(actions, before) for actions, taken in (
+            (event.then, holds is None or holds), (event.otherwise, not holds)) if taken]
+        after += [before] if once else []
+        self.known = {name: value for name, value in after[0].items() if after[-1].get(name) == value}
+        self.remembered |= fresh
+        return bool(holds) and not once and any(isinstance(action, End) for action in event.then)
+
+    def _act(self, actions: tuple[Action, ...], known: dict[str, float]) -> dict[str, float]:
+        """Reads the actions of one branch; the running values that are known after it."""
+        self.known = dict(known)
+        for action in actions:
             if isinstance(action, Pay):
                 self._read(action.amount)
             elif isinstance(action, Assign):
-                for _, right in action.values:
-                    self._read(right)
-                self.ready |= {name for name, _ in action.values}
+                values = [(name, self._read(right)) for name, right in action.values]
+                for name, value in values:
+                    self._learn(name, value)
             else:
                 break
-        self.remembered |= fresh
-        return bool(holds) and not once and any(isinstance(action, End) for action in event.then)
+        return self.known
+
+    def _update(self, running: Running, value: float | None) -> None:
+        """A running value has been observed; a total of what is known is known."""
+        self.ready.add(running.name)
+        total = running.how == "total" and value is not None and running.name in self.known
+        self._learn(running.name, self.known[running.name] + value if total else None)
+
+    def _learn(self, name: str, value: float | None) -> None:
+        if value is None:
+            self.known.pop(name, None)
+        else:
+            self.known[name] = value
 
     def _read(self, formula: Formula) -> float | None:
         """Reads a formula; its value where that is the same on every path and for every asset, else None."""
@@ -181,6 +248,11 @@ class _Walk:
                     return left
                 right = self._read(formula.right)
                 return right if left is not None else None
+            case Binary(symbol="/"):
+                parts = [self._read(formula.left), self._read(formula.right)]
+                if parts[1] == 0:
+                    self._divided_by_nothing(formula)
+                return _folded(formula, parts)
             case IfElse():
                 condition = self._read(formula.condition)
                 if condition is not None:
@@ -197,9 +269,11 @@ class _Walk:
         if name in self.lets:
             return self._read(self.lets[name])
         if name in self.running:
-            self.owner.running.add(name)
+            if self.occasion:
+                self.owner.reads(name, Reading(self.occasion.day, self.occasion.schedule, place))
             if name not in self.ready:
                 self._not_begun(self.running[name], place)
+            return self.known.get(name) if name in self.ready else None
         elif name in self.terms:
             return self._term(name, place)
         elif name in KNOWN_OF_DATE:
@@ -213,7 +287,8 @@ class _Walk:
     def _term(self, name: str, place: Place) -> float | None:
         stated = self.contract.terms.get(name)
         if stated is None:
-            self._not_stated(name, place)
+            if name not in self.contract.at_fault:
+                self._not_stated(name, place)
             return None
         self.owner.terms.add(name)
         if isinstance(stated, Word):
@@ -237,9 +312,7 @@ class _Walk:
         if self.occasion is None or self.occasion.earlier is None:
             return self._read(formula.first)
         before = self.remembered[self.owner_place, formula.place]
-        self.owner.terms |= before.terms
-        self.owner.running |= before.running
-        self.owner.wrong = before.wrong | self.owner.wrong
+        self.owner.add(before)
         return None
 
     def _memory(self, *formulas: Formula) -> dict[tuple[Place, Place], Seen]:
@@ -267,7 +340,16 @@ class _Walk:
     def _not_stated(self, term: str, place: Place) -> None:
         text = (f"the term '{term}' is missing: it is optional in '{self.contract.payoff.name}', but with "
                 f"these terms it is read{self._on} ({place})")
-        self.owner.wrong.setdefault(term, Fault(self.contract.place, text))
+        self.owner.wrong.setdefault(term, Fault(self.contract.terms_place or self.contract.place, text))
+
+    def _divided_by_nothing(self, formula: Binary) -> None:
+        """A division by 0 on every path: the fault of the dates, which let nothing be counted."""
+        by = f"'{formula.right.name}', which is 0 then" if isinstance(formula.right, Name) else "what is 0 then"
+        text = f"{self._on.strip() or 'at the start'} a formula divides by {by} ({formula.right.place})"
+        stated = None
+        if self.occasion and self.occasion.schedule:
+            stated = place_of(self.contract.terms[self.occasion.schedule], self.occasion.nth - 1)
+        self.owner.wrong.setdefault(f"{formula.right.place}{self._on}", Fault(stated or formula.right.place, text))
 
     def _not_begun(self, running: Running, place: Place) -> None:
         """A running value that is read before its first date: the fault of the dates that the contract
@@ -277,8 +359,10 @@ class _Walk:
                    if update.running.name == running.name and update.first]
         begins = f"begins on {starts[0]}" if starts else "has no date"
         text = f"'{running.name}' is read{self._on} ({place}), but {begins}"
-        stated = self.contract.terms.get(running.at.name) if isinstance(running.at, At) else None
-        self.owner.wrong.setdefault(running.name, Fault(stated.place if stated else running.place, text))
+        ends = (running.at,) if isinstance(running.at, At) else (running.at.start, running.at.end)
+        stated = [self.contract.terms[end.name].place for end in ends if end.name in self.contract.terms]
+        place = stated[0] if len(stated) == len(ends) else self.contract.terms_place
+        self.owner.wrong.setdefault(running.name, Fault(place or running.place, text))
 
 
 def _formulas(event: Event) -> list[Formula]:

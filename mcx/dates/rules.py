@@ -45,6 +45,8 @@ class TermDays:
 
     def of_term(self, name: str) -> tuple[Day, ...]:
         """The days of a term in order; none where they are at fault."""
+        if name not in self.terms:
+            return ()
         if name not in self._found:
             self._found[name] = ()
             self._busy.add(name)

@@ -2,7 +2,8 @@
 
 `--paths` is taken as it is. `--within` asks for a 95 % half-width, and `--seconds` for a time: a pilot run from a
 stream of its own finds the spread, or the speed, and fixes the number; the main run then uses fresh numbers. Stopping
-a run when its own error looks small would be biased.
+a run when its own error looks small would be biased. Reading the request loads nothing heavy: it comes before the
+documents are known to be sound.
 """
 
 from __future__ import annotations
@@ -11,11 +12,13 @@ import math
 import re
 from collections.abc import Callable
 from dataclasses import dataclass
-
-import numpy as np
+from typing import TYPE_CHECKING
 
 from mcx.estimators.estimate import NORMAL_95
 from mcx.faults import RequestError
+
+if TYPE_CHECKING:
+    import numpy as np
 
 DEFAULT_PATHS = 1 << 20
 DEFAULT_SEED = 1
@@ -69,7 +72,7 @@ def precision(paths: int | None, within: str | float | None, seconds: float | No
 
 
 def _whole(paths: object) -> int:
-    if isinstance(paths, bool) or not isinstance(paths, int | np.integer):
+    if isinstance(paths, bool) or not hasattr(paths, "__index__"):
         raise RequestError(f"'paths' is a whole number of at least {FEWEST_PATHS}, not {paths!r}")
     if not FEWEST_PATHS <= paths <= MOST_PATHS:
         raise RequestError(f"'paths' is from {FEWEST_PATHS} (one path has no error) to {MOST_PATHS:,}, not {paths:,}")
@@ -144,6 +147,8 @@ def _by_half_width(asked: Precision, prices: Callable[[int], np.ndarray]) -> Pla
 
 def unlike(prices: np.ndarray) -> int:
     """How many paths differ from the commonest price."""
+    import numpy as np
+
     return len(prices) - int(np.unique(prices, return_counts=True)[1].max())
 
 

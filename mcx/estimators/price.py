@@ -41,7 +41,7 @@ class Valuation:
     """Every output of a contract's tape with its error.
 
     outputs and results belong together, price first; `stages` is the price at a quarter, half and all of the paths;
-    `seconds` the time of the main run; `refinement` how fine the steps are, where the price lies between bounds.
+    `seconds` the time of the main run; `ready` the contract as it was run, with refined steps; `refinement` how fine the steps are, where the price lies between bounds.
     """
 
     outputs: tuple[Output, ...]
@@ -51,6 +51,7 @@ class Valuation:
     seed: int
     seconds: float
     interrupted: bool
+    ready: Ready | None = None
     refinement: Refinement | None = None
 
     @property
@@ -89,8 +90,8 @@ def value(
     pieces: int | None = None,
     progress: Progress | None = None,
     notice: Notice | None = None,
-) -> tuple[Ready, Valuation]:
-    """The value of a contract, and the contract as it was run; `threads` None takes all, and changes no digit.
+) -> Valuation:
+    """The value of a contract; `threads` None takes all, and changes no digit.
 
     Where the price lies between bounds the steps are refined until these are closer than the 95 % half-width asked for,
     or that of the paths asked for; `pieces` prescribes the refinement (see `estimators.bracket`), as a replay must.
@@ -127,7 +128,7 @@ def value(
     if sums.paths < FEWEST_PATHS:
         raise KeyboardInterrupt
     results = estimates(sums.paths, sums.mean, sums.m2)
-    return ready, Valuation(outputs, results, _stages(sums), planned, seed, seconds, sums.interrupted, refinement)
+    return Valuation(outputs, results, _stages(sums), planned, seed, seconds, sums.interrupted, ready, refinement)
 
 
 def _counted(progress: Progress | None, planned: Plan) -> Callable[[int, float, float], None] | None:

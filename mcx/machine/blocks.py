@@ -18,6 +18,7 @@ from mcx.machine.draws import fill_draws
 from mcx.machine.forward import forward
 from mcx.machine.jit import jit
 from mcx.machine.prepare import KernelCode
+from mcx.machine.rows import borrowed, wide_vectors
 from mcx.machine.sizes import GROUP, lanes_for
 
 _TASKS = 16  # pieces of a batch for each thread: a core that is busy with something else takes fewer
@@ -38,6 +39,7 @@ def sweep(code, scalars, outputs, normals, uniforms, seed, stream, numbers, path
     values     (paths, outputs), written; or (0, outputs)
     """
     lanes, width = words.shape[1], outputs.shape[0]
+    registers = borrowed(registers)
     tree = registers[registers.shape[0] - 1]
     for first in range(0, paths, lanes):
         fill_draws(registers, words, numbers[first : first + lanes], normals, uniforms, seed, stream)
@@ -64,6 +66,7 @@ def sweep(code, scalars, outputs, normals, uniforms, seed, stream, numbers, path
 def _tree_sum(tree, x, centre, squared, count):
     """The sum over the first `count` of 64 lanes of x - centre, or of its square, pair by pair, then pairs of
     pairs: the tree fixes the order of the additions and still fills vector registers."""
+    wide_vectors()
     for i in range(32):
         a, b = x[i] - centre, x[i + 32] - centre
         a, b = a * a if squared else a, b * b if squared else b
@@ -86,6 +89,15 @@ def _first_bad(registers, outputs, start, count):
     return -1  # all finite: only the sum of squares overflowed
 
 
+def _numbered(numbers: range | np.ndarray, first: int, end: int) -> np.ndarray:
+    """Numbers first .. end - 1 as an array; for those past the last others serve. Each thread makes its own of a range:
+    one array for all threads would take new pages of memory, which costs them 3 % of their time."""
+    part = numbers[first:end]
+    if isinstance(part, range):
+        part = np.arange(part.start, part.stop, dtype=np.uint64)
+    return part if len(part) == end - first else np.resize(part, end - first)
+
+
 class Crew:
     """Threads, each with room to work, that run one kernel code; a context manager, for one caller."""
 
@@ -105,31 +117,31 @@ class Crew:
             self._pool.shutdown()
 
     def run(
-        self, numbers: np.ndarray, values: np.ndarray | None = None
+        self, numbers: range | np.ndarray, values: np.ndarray | None = None
     ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Means, squares and first bad value of each group of the given path numbers, as `sweep` writes them.
 
-        numbers (paths,) uint64; values (paths, outputs) float64 is filled if given.
+        numbers a range, or (paths,) uint64; values (paths, outputs) float64 is filled if given.
         """
         paths, outputs = len(numbers), len(self.code.outputs)
         groups, blocks = -(-paths // GROUP), -(-paths // self.lanes)
-        padded = np.concatenate([numbers, np.resize(numbers, blocks * self.lanes - paths)])
         means, squares = np.empty((groups, outputs)), np.empty((groups, outputs))
         bad = np.empty(groups, dtype=np.int64)
-        piece = -(-blocks // (self.threads * _TASKS if self._pool else 1)) * self.lanes
+        pieces = min(blocks, self.threads * _TASKS) if self._pool else 1
+        bounds = [blocks * piece // pieces * self.lanes for piece in range(pieces + 1)]
 
-        def work(first: int) -> None:
-            last = min(first + piece, paths)
+        def work(piece: int) -> None:
+            first, end = bounds[piece : piece + 2]
+            last = min(end, paths)
             these = slice(first // GROUP, -(-last // GROUP))
             written = np.empty((0, outputs)) if values is None else values[first:last]
             room = self._rooms.pop()
             sweep(self.code.code, self.code.scalars, self.code.outputs, *self._draws,
-                  padded[first : first + piece], last - first, *room,
+                  _numbered(numbers, first, end), last - first, *room,
                   means[these], squares[these], bad[these], written)  # fmt: skip
             self._rooms.append(room)
 
-        firsts = range(0, paths, piece)
-        for _ in self._pool.map(work, firsts) if self._pool else map(work, firsts):
+        for _ in self._pool.map(work, range(pieces)) if self._pool else map(work, range(pieces)):
             pass
         return means, squares, bad
 

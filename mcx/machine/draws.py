@@ -11,6 +11,7 @@ import numpy as np
 
 from mcx.machine.jit import jit
 from mcx.machine.philox import fill_words
+from mcx.machine.rows import borrowed, wide_vectors
 from mcx.machine.special import normal_row
 
 _UNIFORM_BLOCKS = 1 << 31
@@ -24,6 +25,8 @@ def fill_draws(registers, words, numbers, normals, uniforms, seed, stream):
     words      (4, lanes) int32, room to work
     numbers    (lanes,) uint64, path numbers
     """
+    wide_vectors()
+    registers, words = borrowed(registers), borrowed(words)
     lanes = words.shape[1]
     for row in range(normals):
         if row % 4 == 0:

@@ -11,6 +11,7 @@ import numpy as np
 from mcx.machine.bridges import bridge_range, corridor
 from mcx.machine.forms import Form
 from mcx.machine.jit import jit
+from mcx.machine.rows import borrowed, wide_vectors
 from mcx.machine.special import exp_row, log_row
 from mcx.tape.bridges import CLOSEST, LEAST_EXPONENT
 
@@ -34,6 +35,8 @@ def forward(registers, code, scalars, lanes):
 
 @jit
 def _arithmetic(form, y, registers, scalars, a, b, lanes):
+    wide_vectors()
+    registers, scalars = borrowed(registers), borrowed(scalars)
     if form == Form.FILL_S:
         s = scalars[a]
         for i in range(lanes):
@@ -110,6 +113,8 @@ def _arithmetic(form, y, registers, scalars, a, b, lanes):
 
 @jit
 def _logic(form, y, registers, scalars, a, b, c, lanes):
+    wide_vectors()
+    registers, scalars = borrowed(registers), borrowed(scalars)
     if form == Form.LT_RR:
         p, q = registers[a], registers[b]
         for i in range(lanes):
@@ -175,6 +180,8 @@ def _logic(form, y, registers, scalars, a, b, c, lanes):
 
 @jit
 def _model(form, y, registers, scalars, a, b, c, d, lanes):
+    wide_vectors()
+    registers, scalars = borrowed(registers), borrowed(scalars)
     if form == Form.STEP_RSR:
         x, s, z = registers[a], scalars[b], registers[c]
         for i in range(lanes):
@@ -201,6 +208,8 @@ def _model(form, y, registers, scalars, a, b, c, d, lanes):
 
 @jit
 def _watch(form, y, registers, scalars, a, b, c, d, lanes):
+    wide_vectors()
+    registers, scalars = borrowed(registers), borrowed(scalars)
     if form == Form.CLEAR_EXPONENT_RRS:  # both sides of each `if` are computed: a branch would stop vectorisation
         p, q, s = registers[a], registers[b], scalars[c]
         for i in range(lanes):

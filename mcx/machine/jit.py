@@ -35,6 +35,22 @@ def jit(function):
         numba.config.CACHE_DIR = before
 
 
+def _load_without_blas():
+    """Import the part of numba that would load all of scipy's linear algebra only to know whether scipy is there:
+    it is, being required, and whoever needs it later loads it then. A tenth of a process's start."""
+    from numba.np import linalg
+
+    ensure, linalg.ensure_blas = linalg.ensure_blas, lambda: None
+    try:
+        import numba.np.arraymath  # noqa: F401
+    finally:
+        linalg.ensure_blas = ensure
+
+
+if COMPILED:
+    _load_without_blas()
+
+
 def is_cold(entry: str) -> bool:
     """Whether the kernel named `entry` has still to be compiled for this machine."""
     return COMPILED and not any(cache_folder().rglob(f"*.{entry}-*.nbi"))

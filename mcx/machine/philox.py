@@ -9,6 +9,7 @@ from __future__ import annotations
 import numpy as np
 
 from mcx.machine.jit import jit
+from mcx.machine.rows import wide_vectors
 
 _M0, _M1 = np.uint64(0xD2511F53), np.uint64(0xCD9E8D57)  # multipliers
 _W0, _W1 = np.uint64(0x9E3779B9), np.uint64(0xBB67AE85)  # what the key grows by in each round
@@ -29,6 +30,7 @@ def fill_words(words, numbers, seed, block, stream):
     Two lanes half a row apart go through together: one chain of ten rounds would leave the multipliers
     waiting (measured: 0.65 against 0.90 ns a word).
     """
+    wide_vectors()
     half = words.shape[1] >> 1
     halves = words.reshape((8, half))
     pairs = numbers.reshape((2, half))

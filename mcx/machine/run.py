@@ -103,8 +103,7 @@ def run(
         try:
             for first in range(0, paths, batch):
                 count = min(batch, paths - first)
-                numbers = np.arange(first_path + first, first_path + first + count, dtype=np.uint64)
-                means, squares, bad = crew.run(numbers)
+                means, squares, bad = crew.run(range(first_path + first, first_path + first + count))
                 _refuse_bad(bad, first_path + first, code, seed, stream)
                 totals.add(count, means, squares)
                 noted = tuple(Snapshot(*sums) for sums in totals.noted)

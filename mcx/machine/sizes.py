@@ -36,7 +36,7 @@ _DEAR = {
 _BY_FORM = np.array([_DEAR.get(form, _USUAL) for form in Form])
 
 
-_BATCH = 1 << 17  # paths between two reports of progress,
+_BATCH = 1 << 19  # paths between two reports of progress,
 _BATCH_TIME = 2.5e8  # unless they take longer than this on one core: an interruption must be prompt
 _CACHE = 3 << 16  # bytes of a register file: with room to spare in a second-level cache of 512 KB
 
@@ -59,5 +59,6 @@ def batch_for(code: KernelCode, lanes: int) -> int:
 
 
 def lanes_for(rows: int) -> int:
-    """How many paths a block has: its register file stays in the second-level cache; a multiple of 64."""
-    return min(max(_CACHE // (8 * rows) // GROUP * GROUP, GROUP), 1024)
+    """How many paths a block has: its register file stays in the second-level cache; a multiple of 64. Below 128
+    the instructions themselves cost more than what a smaller file saves, however many rows there are."""
+    return min(max(_CACHE // (8 * rows) // GROUP * GROUP, 2 * GROUP), 1024)

@@ -12,6 +12,7 @@ import numpy as np
 
 from mcx.machine.bits import bits_to_float, float_to_bits, lowest_bit, mask_above
 from mcx.machine.jit import jit
+from mcx.machine.rows import wide_vectors
 
 # 2^52 + 2^51: adding it rounds a number below 2^51 to an integer, which is then in the low bits of the sum.
 _ROUNDER = 6755399441055744.0
@@ -35,6 +36,7 @@ _A10, _A11 = 2.7621413452613798723e-7, 2.5388277094897738076e-8
 @jit
 def exp_row(y, x, lanes):
     """y = exp(x) to 1.5 ulp; overflow to inf and gradual underflow as IEEE has them."""
+    wide_vectors()
     unusual = _ZERO
     for i in range(lanes):
         a = x[i]
@@ -71,6 +73,7 @@ _SMALLEST_BITS, _LARGEST_BITS = _SMALLEST.view(np.int64), _LARGEST.view(np.int64
 @jit
 def log_row(y, x, lanes):
     """y = log(x) to 1 ulp; log(0) = -inf, of a negative number NaN."""
+    wide_vectors()
     unusual = _ZERO
     for i in range(lanes):
         bits = float_to_bits(x[i])
@@ -111,6 +114,7 @@ _ONE = np.uint64(1)
 @jit
 def normal_row(z, words, lanes):
     """z = the inverse normal of (k + 1/2) / 2^32, from words k - 2^31 (int32); lanes: a multiple of 64."""
+    wide_vectors()
     for i in range(lanes):
         s = (words[i] + 0.5) * 2.0**-31
         t = 1.0 - s * s

@@ -9,13 +9,18 @@ from collections.abc import Iterator, Sequence
 from itertools import combinations
 
 from mcx.checked.formula import Formula, Name, walk
-from mcx.checked.payoff import Payoff, Term
+from mcx.checked.payoff import MONEY, MULTIPLES, Payoff, Term
 from mcx.report.settled import right_sides
 from mcx.report.wording import figure
 
 WIDTH = 34  # where the words about a blank begin
 LATER = "# A quote to fill in comes with the version that explains quotes."
 BOUNDS = (("above", "above"), ("below", "below"), ("at_least", "at least"), ("at_most", "at most"))
+SIZES = {
+    MONEY: ("units", "", "a number; payments are money per unit"),
+    MULTIPLES: ("notional", "", "an amount; payments are multiples of it"),
+    "": ("notional", "", "an amount; for payments in money per unit write 'units:' instead"),
+}
 WRITTEN = {
     "number": "a number",
     "percent": "as 70% or 25 bp",
@@ -52,7 +57,7 @@ def _contract(payoff: Payoff, assets: Sequence[str]) -> Iterator[str]:
     yield f"# A contract on the definition '{payoff.name}'. Fill in what stands empty."
     yield f"contract: New {payoff.name.replace('_', ' ')} on {' and '.join(assets)}"
     yield _line("currency", about="as EUR")
-    yield _line("notional", about="an amount; for payments in money per unit write 'units:' instead")
+    yield _line(*SIZES[payoff.pays])
     yield f"assets: [{', '.join(assets)}]"
     yield _line("start", about="date from which periods and years count")
     if _uses_period(payoff):
@@ -86,7 +91,8 @@ def _about(term: Term) -> str:
         written += f", or a list for the dates of {term.per}"
     elif term.type == "dates" and term.per:
         written += f"; one for each of {term.per}"
-    bounds = [f"{word} {figure(getattr(term, key), term.type)}" for key, word in BOUNDS if getattr(term, key) is not None]
+    limits = [(word, getattr(term, key)) for key, word in BOUNDS]
+    bounds = [f"{word} {figure(limit, term.type)}" for word, limit in limits if limit is not None]
     listed = ", ".join((written, *bounds))
     return f"{term.about} ({listed})" if term.about else listed
 

@@ -22,16 +22,16 @@ LARGE_Z = 4.0
 def warnings(valuation: Valuation, tape: Tape, martingale: tuple[Martingale, ...], met: bool | None) -> Iterator[str]:
     """What this run shows that a reader must know."""
     if valuation.interrupted:
-        yield (f"interrupted after {valuation.price.paths:,} of {valuation.plan.paths:,} paths; the estimate is that of "
-               f"the paths so far")
+        yield (f"interrupted after {valuation.price.paths:,} of {valuation.plan.paths:,} paths; the estimate is that "
+               f"of the paths so far")
     yield from valuation.plan.warnings
     if valuation.refinement is not None and not valuation.refinement.reached:
         yield (f"the bounds of the price are {valuation.refinement.width.value:.3g} apart by the pilot run, not the "
                f"{valuation.refinement.target:.3g} aimed at: the steps were not refined further than to "
                f"{valuation.refinement.steps}")
     if met is False and not valuation.interrupted:
-        yield (f"the precision asked for was not reached: the 95 % half-width is {valuation.price.half_width:.3g}, asked "
-               f"for was {valuation.plan.target:.3g}")
+        yield (f"the precision asked for was not reached: the 95 % half-width is {valuation.price.half_width:.3g}, "
+               f"asked for was {valuation.plan.target:.3g}")
     for output, estimate in valuation.of("condition"):
         count = round(estimate.value * estimate.paths)
         if not output.day and count < FEW_PATHS and tape.instructions[output.value].op is not Op.CONSTANT:
@@ -43,8 +43,8 @@ def warnings(valuation: Valuation, tape: Tape, martingale: tuple[Martingale, ...
                    f"chance once in {_odds(test.z)} runs")
     jump = _drift(valuation.stages)
     if abs(jump) > LARGE_Z:
-        yield (f"the price moved by {abs(jump):.1f} standard errors between half and all of the paths: a few paths weigh "
-               f"heavily, and the error is not to be trusted")
+        yield (f"the price moved by {abs(jump):.1f} standard errors between half and all of the paths: a few paths "
+               f"weigh heavily, and the error is not to be trusted")
 
 
 def _odds(z: float) -> str:
@@ -76,7 +76,8 @@ def assumptions(dated: DatedContract, market: Market) -> Iterator[str]:
     for name in contract.assets:
         asset = market.assets[name]
         curves.append((f"the vols of {name}", asset.vol, end, "vol"))
-        for curve, what, held in ((asset.dividend_yield, "yields", "forward yield"), (asset.forwards, "forwards", "growth")):
+        drifts = ((asset.dividend_yield, "yields", "forward yield"), (asset.forwards, "forwards", "growth"))
+        for curve, what, held in drifts:
             if curve is not None:
                 curves.append((f"the {what} of {name}", curve, end, held))
     for what, curve, day, held in curves:
@@ -94,11 +95,11 @@ def limits(dated: DatedContract) -> Iterator[str]:
     yield ("risk-neutral lognormal levels with one vol for each asset and tenor: no skew, no stochastic vol, no jumps; "
            "rates and yields are known in advance")
     if _turns(settled):
-        yield ("under skew the levels where this contract turns have vols of their own: price it with their vol too, and "
-               "read the two as a bracket")
+        yield ("under skew the levels where this contract turns have vols of their own: price it with their vol too, "
+               "and read the two as a bracket")
     if _looks_back(settled):
-        yield ("returns from one date to another live on forward vol and forward skew, which one vol for each tenor does "
-               "not say: indicative only")
+        yield ("returns from one date to another live on forward vol and forward skew, which one vol for each tenor "
+               "does not say: indicative only")
     if len(contract.assets) > 1:
         yield "one fixed correlation for each pair of assets; in falls they usually move more together"
     if contract.notional is not None:

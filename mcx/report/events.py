@@ -91,6 +91,8 @@ def _doing(actions: Iterable[Action], event: Event, dated: DatedContract, words:
 
 def _paying(pay: Pay, event: Event, dated: DatedContract, words: Words, settled: Settled) -> str:
     amount = settled.formula(pay.amount)
+    if isinstance(amount, Number) and amount.value == 0.0:
+        return "pays nothing"
     leg = f" as '{pay.leg}'" if pay.leg != "payment" else ""
     part = f" (part: {pay.part})" if pay.part and pay.part != pay.leg else ""
     return f"pays {_amount(amount, dated, words)}{leg}{part}, {_due(pay, event, dated)}"

@@ -45,9 +45,10 @@ class _Reader:
         self.faults: list[Fault] = []
 
     def yaml(self, data: bytes, file: str) -> None:
+        if not data.strip():
+            self.faults.append(Fault(Place(file, 1, 1), f"the file is empty; expected {SHAPE}"))
+            return
         nodes, self.faults = read_yaml(data, file)
-        if not nodes and not self.faults:
-            self.faults.append(Fault(Place(file, 1, 1), f"expected {SHAPE}, found nothing"))
         for node in nodes:
             if not isinstance(node, Mapping):
                 self.faults.append(expected(SHAPE, node))
@@ -66,23 +67,38 @@ class _Reader:
         if isinstance(text, Fault):
             self.faults.append(text)
             return
-        rows = list(csv.reader(text.splitlines()))
-        head = [cell.strip() for cell in rows[0]] if rows else []
-        if head[:1] != ["date"] or len(head) < 2:
+        rows = self._rows(text, file)
+        head = rows[0] if rows else []
+        if len(head) < 2 or head[0].text != "date":
             self.faults.append(Fault(Place(file, 1, 1), "expected a first line 'date,' and the assets, as "
                                                         f"'date,{','.join(self.assets)}'"))
             return
-        known = [name for name in head[1:] if self._is_asset(Scalar(name, Place(file, 1, 1)))]
-        for line, row in enumerate(rows[1:], start=2):
-            cells = _cells(row, file, line)
+        columns: dict[str, int] = {}
+        for number, name in enumerate(head[1:], start=1):
+            if name.text in columns:
+                self.faults.append(Fault(name.place, f"a second column of '{name.text}'"))
+            elif self._is_asset(name):
+                columns[name.text] = number
+        for cells in rows[1:]:
             if not any(cell.text for cell in cells):
                 continue
             if len(cells) != len(head):
-                self.faults.append(Fault(Place(file, line, 1), f"expected {len(head)} values, found {len(cells)}"))
+                self.faults.append(Fault(cells[0].place, f"expected {len(head)} values, found {len(cells)}"))
                 continue
-            for name, cell in zip(head[1:], cells[1:], strict=True):
-                if name in known and cell.text:
-                    self._add(name, cells[0], cell)
+            for name, number in columns.items():
+                if cells[number].text:
+                    self._add(name, cells[0], cells[number])
+
+    def _rows(self, text: str, file: str) -> list[list[Scalar]]:
+        """The cells of every line, as far as the lines can be read."""
+        reader = csv.reader(text.splitlines(), strict=True)
+        rows = []
+        try:
+            for row in reader:
+                rows.append(_cells(row, file, reader.line_num))
+        except csv.Error as error:
+            self.faults.append(Fault(Place(file, reader.line_num, 1), f"the line is not CSV: {error}"))
+        return rows
 
     def _is_asset(self, name: Scalar) -> bool:
         if name.text in self.assets:

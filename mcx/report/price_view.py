@@ -97,7 +97,8 @@ def _amounts(amounts: Sequence[Amount], result: PriceResult, scale: Scale) -> It
     for each in amounts:
         yield (each.name, scale.show(each.price, places), scale.show(each.standard_error, places), fixed(each.value, 2))
     if len(amounts) > 1:
-        yield ("sum", scale.show(result.price, places), scale.show(result.standard_error, places), fixed(result.value, 2))
+        price, error = (scale.show(number, places) for number in (result.price, result.standard_error))
+        yield ("sum", price, error, fixed(result.value, 2))
 
 
 def _probabilities(result: PriceResult, page: Page) -> None:
@@ -150,9 +151,13 @@ def _checks(result: PriceResult, scale: Scale, page: Page) -> None:
 
 def show_prices(table: PriceTable, page: Page) -> None:
     """Several contracts: one line each, then what is particular to some, then what holds for all."""
+    if table.interrupted:
+        page.line("interrupted: the estimates so far", style="bold")
     page.table(("contract", "", "price", "± 95 %", "currency", "value"), map(_row, table.prices), words=2)
-    page.line("± is the half-width of the 95 % interval, sampling error only; legs, probabilities and checks: one contract "
-              "at a time, or --json")
+    page.line("± is the half-width of the 95 % interval, sampling error only; legs, probabilities and checks: one "
+              "contract at a time, or --json")
+    if table.not_valued:
+        page.line(f"not valued: {', '.join(table.not_valued)}")
     first = table.prices[0]
     page.named((
         ("valued on", first.valuation or "time 0"),

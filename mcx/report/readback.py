@@ -140,7 +140,9 @@ def _continuous(watch: Watch, wanted: bool, notes: dict, unrolled: Unrolled) -> 
 
 
 def _is_watch(running: Running, dated: DatedContract) -> bool:
-    term = dated.contract.payoff.term(running.at.name) if running.at and not isinstance(running.at, Continuous) else None
+    if running.at is None or isinstance(running.at, Continuous):
+        return False
+    term = dated.contract.payoff.term(running.at.name)
     return term is not None and term.type == "watch"
 
 

@@ -15,13 +15,13 @@ from collections.abc import Iterator, Mapping
 from importlib import metadata
 from pathlib import Path
 
-from mcx.faults import RequestError
+from mcx.faults import Fault, RequestError
 from mcx.report.results import Replay
 from mcx.text.documents import parse_documents
 from mcx.text.located import Document
 
 FORMAT = 1
-PACKAGES = ("mcx", "numpy", "numba", "llvmlite", "scipy", "pyyaml", "holidays")
+PACKAGES = ("mcx", "numpy", "numba", "llvmlite", "scipy", "pyyaml", "holidays", "python-dateutil")
 CHECKSUM = "sha256"
 CLOSE = 1e-12  # relative, on another type of processor
 # How long it took, how the number of paths was found, and what is worded: sentences change with versions.
@@ -90,6 +90,8 @@ def check_free(file: str | Path) -> None:
         raise RequestError(f"{target}: the file exists; a record is never written over another file")
     if not target.parent.is_dir():
         raise RequestError(f"{target}: there is no folder '{target.parent}'")
+    if not os.access(target.parent, os.W_OK):
+        raise RequestError(f"{target}: nothing can be written in the folder '{target.parent}'")
 
 
 def read_record(file: str | Path) -> dict:
@@ -99,7 +101,8 @@ def read_record(file: str | Path) -> dict:
     except (OSError, ValueError) as error:
         raise RequestError(f"{file}: the record cannot be read: {_reason(error)}") from None
     try:
-        record = json.loads(data.decode("utf-8"))
+        record = json.loads(data.decode("utf-8"), parse_constant=_no_number)
+        json.dumps(record, ensure_ascii=False, allow_nan=False).encode("utf-8")  # no 1e999, no half characters
     except (ValueError, RecursionError):
         raise RequestError(f"{file}: this is no whole valuation record: it may have been cut short") from None
     if not isinstance(record, dict) or "record" not in record:
@@ -108,17 +111,35 @@ def read_record(file: str | Path) -> dict:
         raise RequestError(f"{file}: the record has format {record['record']!r}; this version reads format {FORMAT}")
     stated = record.pop(CHECKSUM, None)
     if stated != _checksum(record):
-        raise RequestError(f"{file}: the record's checksum does not hold: it was cut short or edited since it was written")
+        raise RequestError(f"{file}: the record's checksum does not hold: it was cut short or edited since it was "
+                           f"written")
+    if not _whole(record):
+        raise RequestError(f"{file}: the record lacks inputs, requests or results, though its checksum holds")
     return record
 
 
-def documents_of(record: Mapping) -> list[Document]:
-    """The documents that a record holds, under the names of their files."""
-    found = []
+def _no_number(text: str) -> None:
+    raise ValueError(f"{text} is no number of JSON")
+
+
+def _whole(record: Mapping) -> bool:
+    """Whether everything is there that a replay reads, one request for each result."""
+    match record:
+        case {"inputs": [*inputs], "request": [*requests], "results": [*results], "environment": {}}:
+            return (len(requests) == len(results)
+                    and all(isinstance(each, dict) and {"file", "text"} <= each.keys() for each in inputs)
+                    and all(isinstance(each, dict) and {"paths", "seed"} <= each.keys() for each in requests))
+    return False
+
+
+def documents_of(record: Mapping) -> tuple[list[Document], list[Fault]]:
+    """The documents that a record holds, under the names of their files, and what this version finds wrong in them."""
+    found, faults = [], []
     for each in record["inputs"]:
-        documents, _ = parse_documents(each["text"].encode("utf-8"), each["file"])
+        documents, wrong = parse_documents(each["text"].encode("utf-8"), each["file"])
         found += documents
-    return found
+        faults += wrong
+    return found, faults
 
 
 def compare(stored: Mapping, results: list[dict], now: Mapping[str, str]) -> Replay:

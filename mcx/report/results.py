@@ -191,13 +191,15 @@ class PriceResult(Result):
 
 @dataclass(frozen=True, slots=True)
 class PriceTable(Result):
-    """Several contracts on one market, in the order of the files."""
+    """Several contracts on one market, in the order of the files; after an interruption `not_valued` are the titles
+    of those that were not reached."""
 
     prices: tuple[PriceResult, ...]
+    not_valued: tuple[str, ...] = ()
 
     @property
     def interrupted(self) -> bool:
-        return any(price.interrupted for price in self.prices)
+        return bool(self.not_valued) or any(price.interrupted for price in self.prices)
 
 
 @dataclass(frozen=True, slots=True)
@@ -348,9 +350,9 @@ class Replay(Result):
     """Whether a stored valuation reproduces: `mcx replay`.
 
     `identical`: every number, name and date is the same, to the last bit on the same type of processor, within 1e-12
-    elsewhere. `largest_difference` is the largest of |difference| / max(1, |stored|); `first_difference` names the first
-    result that differs ('' where none does), with what was stored and found. `changed` lists what is not as it was when
-    the record was written: versions, source and processor.
+    elsewhere. `largest_difference` is the largest of |difference| / max(1, |stored|); `first_difference` names the
+    first result that differs ('' where none does), with what was stored and found. `changed` lists what is not as it
+    was when the record was written: versions, source and processor.
     """
 
     identical: bool

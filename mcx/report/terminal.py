@@ -7,6 +7,7 @@ import re
 import sys
 from collections.abc import Iterable, Sequence
 
+from rich.cells import cell_len
 from rich.console import Console
 from rich.padding import Padding
 from rich.table import Table
@@ -14,6 +15,7 @@ from rich.text import Text
 
 NUMBER = "right"
 MOST_DECIMALS = 10
+INDENT, GAP = 2, 2  # columns before a table and between its columns
 
 
 class Page:
@@ -28,6 +30,7 @@ class Page:
         """Writes the page; nothing can be added after that."""
         self._capture.__exit__(None, None, None)
         sys.stdout.write(re.sub(" +$", "", self._capture.get(), flags=re.MULTILINE))
+        sys.stdout.flush()  # whatever is wrong with the reader shows now, not when the process ends
 
     def heading(self, text: str) -> None:
         self.console.print()
@@ -47,23 +50,40 @@ class Page:
     def named(self, pairs: Iterable[tuple[str, str]]) -> None:
         """Names with what is said of them."""
         grid = Table.grid(padding=(0, 2))
-        grid.add_column(max_width=24)
+        grid.add_column(max_width=24, overflow="fold")
         grid.add_column()
         for name, text in pairs:
             grid.add_row(Text(name), Text(text))
         self.console.print(grid)
 
     def table(self, heads: Sequence[str], rows: Iterable[Sequence[str]], words: int = 1) -> None:
-        """A table whose first `words` columns hold words; the others hold numbers, aligned right."""
-        table = Table(box=None, pad_edge=False, padding=(0, 2, 0, 0), header_style="bold")
-        for number, head in enumerate(heads):
-            if number < words:
-                table.add_column(head, overflow="fold")
-            else:
-                table.add_column(head, justify=NUMBER, no_wrap=True)
+        """A table whose first `words` columns hold words; the others hold numbers, aligned right.
+
+        Where the page is too narrow words go below one another; a table that is still too wide stays as wide as it must
+        be: no word and no number is ever broken or cut.
+        """
+        rows = [list(row) for row in rows]
+        page = self.console.width
+        widths = _widths([list(column) for column in zip(heads, *rows, strict=True)], words, page)
+        table = Table(box=None, pad_edge=False, padding=(0, GAP, 0, 0), header_style="bold")
+        for number, (head, width) in enumerate(zip(heads, widths, strict=True)):
+            table.add_column(head, width=width, justify="left" if number < words else NUMBER, overflow="fold")
         for row in rows:
-            table.add_row(*(Text(cell) for cell in row))
-        self.console.print(Padding(table, (0, 0, 0, 2)))
+            table.add_row(*map(Text, row))
+        self.console.width = max(page, INDENT + sum(widths) + GAP * len(widths))
+        self.console.print(Padding(table, (0, 0, 0, INDENT)))
+        self.console.width = page
+
+
+def _widths(columns: Sequence[Sequence[str]], words: int, page: int) -> list[int]:
+    """The width of each column of cells: all of it where the page has room, else the longest word's and a fair share
+    of what is left; a column of numbers has all it needs."""
+    full = [max(map(cell_len, cells)) for cells in columns]
+    least = [max(cell_len(word) for cell in cells for word in cell.split() or [""]) for cells in columns[:words]]
+    least += full[words:]
+    room = page - INDENT - GAP * (len(columns) - 1) - sum(least)
+    share = max(0.0, min(1.0, room / max(sum(full) - sum(least), 1)))
+    return [low + int(share * (high - low)) for low, high in zip(least, full, strict=True)]
 
 
 def decimals(error: float, digits: int, fewest: int) -> int:

@@ -1,4 +1,5 @@
-"""Formulas that YAML cut at a comma inside `{ }` or `[ ]`: noticing them, saying so, and mending them.
+"""Formulas that YAML cut at a comma inside `{ }` or `[ ]`: noticing them, saying so, and mending them; and numbers
+that it cut at a decimal comma inside `{ }`.
 
 `{pay: max(a, b)}` is, to YAML, the key `pay` with the value `max(a`, and a second key `b)` without a value. A bracket
 left open in a plain value with fitting ends behind it gives it away.
@@ -6,11 +7,15 @@ left open in a plain value with fitting ends behind it gives it away.
 
 from __future__ import annotations
 
+import re
+
 from mcx.faults import Fault
 from mcx.text.located import Mapping, Node, Scalar
 from mcx.text.source import Source
 
 
+WHOLE = re.compile("[+-]?[0-9]+")
+DIGITS = re.compile(r"[0-9]+(\.[0-9]+)?\s*(%|bp)?")
 MOST_PIECES = 50
 LONGEST_LINE = 300
 
@@ -24,12 +29,14 @@ def mended_entries(
     at = 0
     while at < len(pairs):
         key, value = pairs[at]
-        last = at
-        if _cut_off(value):
-            last = _closing(value, at, [later if _absent(nothing) else None for later, nothing in pairs])
-        if last > at:
+        last = _digits_behind(pairs, at, source)
+        if last > at:  # whoever reads the number says what to write
             value = _joined(value, pairs[last][0], source)
-            cuts.append(value)
+        elif _cut_off(value):
+            last = _closing(value, at, [later if _absent(nothing) else None for later, nothing in pairs])
+            if last > at:
+                value = _joined(value, pairs[last][0], source)
+                cuts.append(value)
         mended.append((key, value))
         at = last + 1
     _report(cuts, "{ }", source, faults)
@@ -54,6 +61,23 @@ def mended_items(nodes: list[Node], source: Source, faults: list[Fault]) -> list
         at = last + 1
     _report(cuts, "[ ]", source, faults)
     return mended
+
+
+def _digits_behind(pairs: list[tuple[Node, Node]], at: int, source: Source) -> int:
+    """The index of the last piece of a number cut at its commas, as in `{vol: 17,5%}` with no blank behind them; `at`
+    if it was not cut."""
+    last, piece = at, pairs[at][1]
+    if not (isinstance(piece, Scalar) and WHOLE.fullmatch(piece.text)) or piece.quoted:
+        return at
+    for number in range(at + 1, len(pairs)):
+        digits, nothing = pairs[number]
+        if not (_absent(nothing) and isinstance(digits, Scalar) and DIGITS.fullmatch(digits.text)) or digits.quoted:
+            break
+        comma = source.position(piece.at(len(piece.text)))
+        if source.text[comma] != "," or source.position(digits.place) != comma + 1:
+            break
+        last, piece = number, digits
+    return last
 
 
 def _absent(node: Node) -> bool:

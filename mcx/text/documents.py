@@ -7,12 +7,13 @@ import sys
 from collections.abc import Iterable
 from pathlib import Path
 
-from mcx.faults import Fault, Place
+from mcx.faults import Fault, Place, did_you_mean
 from mcx.text.located import Document, Mapping
-from mcx.text.scalars import shown
+from mcx.text.scalars import expected, shown
 from mcx.text.yaml12 import SIZE_LIMIT, read_yaml, too_large
 
 TELLING_KEYS = ("contract", "market", "quote")
+KINDS = (*TELLING_KEYS, "payoff")
 
 
 def read_documents(files: Iterable[str | Path]) -> tuple[list[Document], list[Fault]]:
@@ -46,8 +47,20 @@ def parse_documents(data: bytes, file: str) -> tuple[list[Document], list[Fault]
             faults.append(Fault(node.key(second).place, f"'{second}' cannot stand in one document with '{first}'; "
                                                         "put '---' between two documents"))
             continue
+        if not telling and "events" not in node and node.keys()[:1] != ("payoff",):
+            faults.append(_of_no_kind(node))
+            continue
         documents.append(Document(telling[0] if telling else "payoff", node, file, text))
     return documents, faults
+
+
+def _of_no_kind(node: Mapping) -> Fault:
+    """The fault of a document that is no definition either, at the key that may have been meant to tell."""
+    keys = [key for key, _ in node.entries]
+    near = [(key, hint) for key in keys if key.text not in KINDS and (hint := did_you_mean(key.text, KINDS))]
+    key, hint = near[0] if near else (keys[0] if keys else node, "")
+    return expected(f"a document that begins with {', '.join(map(repr, KINDS[:-1]))} or '{KINDS[-1]}'", key,
+                    hint.removeprefix("; "))
 
 
 def _bytes(file: str) -> bytes | Fault:

@@ -15,7 +15,10 @@ from mcx.text.located import Mapping, Node, Scalar, Sequence
 DIGITS = r"(?:[0-9]+(?:\.[0-9]*)?|\.[0-9]+)"
 NUMBER = re.compile(rf"([+-]?)({DIGITS})(?:[eE]([+-]?[0-9]{{1,5}}))?(?:\s*(%|bp))?")
 NOT_FINITE = re.compile(r"[+-]?\.?(nan|inf|infinity)", re.IGNORECASE)
-SPLIT_THOUSANDS = re.compile(rf"[+-]?[0-9]+(?:[_,' ][0-9]+)+(?:\.[0-9]*)?\s*(?:%|bp)?")
+SPLIT_THOUSANDS = re.compile(r"[+-]?[0-9]+(?:[_,' ][0-9]{3})+(?:\.[0-9]*)?\s*(?:%|bp)?")
+DECIMAL_COMMA = re.compile(r"([+-]?[0-9]*),([0-9]+)(\s*(?:%|bp)?)")
+BASIS_POINTS = re.compile(rf"([+-]?{DIGITS})\s*(?:bps|bip|basis points?)", re.IGNORECASE)
+DOTTED_DATE = re.compile(r"([0-9]{1,2})\.([0-9]{1,2})\.([0-9]{4})")
 DATE = re.compile(r"[0-9]{4}-[0-9]{2}-[0-9]{2}")
 SPAN = re.compile(rf"({DIGITS})([dwmy])")
 PERIOD = re.compile(r"([0-9]{1,5}) +(business day|day|week|month|year)s?")
@@ -79,8 +82,7 @@ def _number(node: Node, what: str) -> tuple[float | Fault, str]:
     if not found:
         if NOT_FINITE.fullmatch(text):
             return expected("a finite number", node), ""
-        whole = re.sub("[_,' ]", "", text)
-        return expected(what, node, f"write '{whole}'" if SPLIT_THOUSANDS.fullmatch(text) else ""), ""
+        return expected(what, node, _meant(text)), ""
     sign, digits, exponent, unit = found.groups()
     if re.match("0[0-9]", digits):
         return expected(what, node, "write it without the leading zero"), ""
@@ -88,6 +90,19 @@ def _number(node: Node, what: str) -> tuple[float | Fault, str]:
     if not math.isfinite(value):
         return expected("a finite number", node, "it is too large"), ""
     return value, unit or ""
+
+
+def _meant(text: str) -> str:
+    """What to write instead of a number as termsheets print it, or ''."""
+    meant = []
+    if SPLIT_THOUSANDS.fullmatch(text):
+        meant.append(re.sub("[_,' ]", "", text))
+    if comma := DECIMAL_COMMA.fullmatch(text):
+        whole = comma[1] if comma[1][-1:].isdigit() else f"{comma[1]}0"
+        meant.append(f"{whole}.{comma[2]}{comma[3]}")
+    if points := BASIS_POINTS.fullmatch(text):
+        meant.append(f"{points[1]} bp")
+    return f"write {' or '.join(map(repr, meant))}" if meant else ""
 
 
 def flag(node: Node) -> bool | Fault:
@@ -106,11 +121,17 @@ def date(node: Node) -> datetime.date | Fault:
     """A calendar date, `2026-11-16`."""
     what = "a date such as '2026-11-16'"
     if not isinstance(node, Scalar) or not DATE.fullmatch(node.text):
-        return expected(what, node)
+        return expected(what, node, date_meant(node))
     try:
         return datetime.date.fromisoformat(node.text)
     except ValueError:
         return expected("a day of the calendar", node)
+
+
+def date_meant(node: Node) -> str:
+    """How to write a date whose day and month come first, parted by points, or ''."""
+    found = DOTTED_DATE.fullmatch(node.text) if isinstance(node, Scalar) else None
+    return f"write '{found[3]}-{found[2]:0>2}-{found[1]:0>2}'" if found else ""
 
 
 def time(node: Node) -> float | Fault:

@@ -78,13 +78,23 @@ def test_examples_load_and_have_dates(file: Path):
     for contract in asked.contracts:
         dated, faults = date_contract(contract, asked.market.valuation)
         assert faults == []
-        assert dated.moments
+        assert dated.moments or dated.hits
 
 
 def test_every_shipped_definition_has_an_example():
     """The library and its examples go together."""
     used = {contract.payoff.name for file in EXAMPLES for contract in load([file]).contracts}
     assert used == set(shipped_names())
+
+
+def test_the_example_of_the_reference():
+    """What the grammar's reference shows as a definition of one's own is one, with a contract that has its dates."""
+    reference = (EXAMPLES[0].parents[1] / "README.md").read_text(encoding="utf-8")
+    example = reference.split("## 2. Write your own definition")[1].split("```yaml\n")[1].split("```")[0]
+    asked, faults = made(example, MARKET)
+    assert faults == []
+    dated, faults = date_contract(asked.contracts[0], asked.market.valuation)
+    assert faults == [] and len(dated.moments) == 4
 
 
 @pytest.mark.parametrize("name", shipped_names())
@@ -131,7 +141,7 @@ SLIPS = [
         for line, name in ((5, "harbour"), (6, "quarry"), (7, "orchard")))]),
     (CONTRACT, "[harbour,", "[harbor,",
      ["a.yaml:4:10: the market has no asset 'harbor'; did you mean 'harbour'?"]),
-    (MARKET, "funding: {EUR: 0 bp}\n", "",
+    (MARKET, "funding: {EUR: 0 bp}", "source: screen",
      ["b.yaml:1:9: no funding spread for 'EUR', the currency of the note 'Worst-of put'; write 'funding: "
       "{EUR: 0 bp}' to value it without the issuer's spread"]),
     (MARKET, ", quarry/orchard: 55%", "", ["b.yaml:8:14: no correlation for 'quarry/orchard'"]),
@@ -147,6 +157,41 @@ def test_slips_between_documents(whole: str, old: str, new: str, expected: list[
     assert whole.count(old) == 1
     texts = [text.replace(old, new) if text == whole else text for text in (CONTRACT, MARKET)]
     assert made(*texts)[1] == expected
+
+
+WRONG_TERM = ("  side: put", "  side: pot",
+              "a.yaml:10:9: expected 'side' to be: 'call' or 'put', found 'pot'; did you mean 'put'?")
+NO_PAYOFF = ("payoff: rainbow_option", "payoff: rainbow_opton",
+             "a.yaml:8:9: there is no payoff 'rainbow_opton'; did you mean 'rainbow_option'?")
+WRONG_VOL = ("vol: 18%", "vol: 18", "b.yaml:5:57: expected a percentage with its unit, found '18'; write '18%'")
+WRONG_DATE = ("market: 2026-12-01", "market: 01.12.2026",
+              "b.yaml:1:9: expected the valuation date, or '0y' for textbook contracts, found '01.12.2026'; "
+              "write '2026-12-01'")
+
+
+@pytest.mark.parametrize("alone", [WRONG_TERM, NO_PAYOFF, WRONG_VOL, WRONG_DATE], ids=lambda slip: slip[1].strip())
+@pytest.mark.parametrize(("whole", "old", "new", "expected"), SLIPS,
+                         ids=[new or old for _, old, new, _ in SLIPS])
+def test_slips_between_documents_beside_others(whole: str, old: str, new: str, expected: list[str], alone):
+    """What does not fit between two documents is told in the same round as what is wrong in either."""
+    texts = [text.replace(old, new) if text == whole else text for text in (CONTRACT, MARKET)]
+    slip, instead, fault = alone
+    assert sum(text.count(slip) for text in texts) == 1
+    expected = [each for each in expected if not (alone is WRONG_VOL and "'harbour' is quoted" in each)]
+    assert made(*(text.replace(slip, instead) for text in texts))[1] == sorted(
+        [fault, *expected], key=lambda text: [int(part) if part.isdigit() else part for part in text.split(":")[:3]])
+
+
+def test_what_is_wrong_in_a_document_is_not_missing_beside_it():
+    """A rate, an asset or a correlation that is there but wrong gives its own fault and no second one."""
+    for old, new, place in (("EUR: 2.1%", "EUR: 2.1", "2:14"), ("vol: 18%", "vol: 18", "5:57"),
+                            ("harbour/quarry: 60%", "harbour/quarry: 0.6", "8:31"),
+                            ("harbour/quarry: 60%", "harbor/quarry: 60%", "8:15"),
+                            ("EUR: 0 bp", "EUR: 80", "3:16"), ("funding: {EUR: 0 bp}", "funding: 80 bp", "3:10"),
+                            ("market: 2026-12-01", "market: today", "1:9")):
+        assert MARKET.count(old) == 1
+        (fault,) = made(CONTRACT, MARKET.replace(old, new))[1]
+        assert fault.startswith(f"b.yaml:{place}: ")
 
 
 def test_currency_of_the_asset():
@@ -180,6 +225,12 @@ def test_times_and_dates_do_not_mix():
         "b.yaml:1:9: 'Call' uses times, and needs a market that begins 'market: 0y'"]
     assert "b.yaml:1:9: 'Worst-of put' uses calendar dates, and needs a market of a date" in made(CONTRACT,
                                                                                                   TEXTBOOK)[1]
+
+
+def test_times_that_cannot_be_read():
+    """Whether a contract uses times is not judged by dates that cannot be read."""
+    (fault,) = made(OPTION.replace("expiry: 1y", "expiry: 1yr"), TEXTBOOK)[1]
+    assert fault.startswith("a.yaml:6:42: expected a date such as '2026-11-16', a time such as '0.25y'")
 
 
 def test_two_markets():
@@ -268,7 +319,8 @@ def test_no_wrong_document_gives_a_traceback(text: str):
     asked, faults = checked_request(documents, faults)
     for contract in asked.contracts:
         dated, wrong = date_contract(contract, asked.market.valuation if asked.market else None)
-        assert (dated is None) == bool(wrong)
+        assert dated is None or not wrong
+        assert dated or wrong or faults
         faults = [*faults, *wrong]
     for fault in faults:
         assert fault.place.line >= 1

@@ -80,7 +80,7 @@ def parsed(text: str, definition: str = DEFINITION) -> tuple[Contract | None, li
     (document,), wrong = parse_documents(text.encode(), "c.yaml")
     assert faults + wrong == []
     contract, faults = read_contract(document, Definitions(own))
-    assert (contract is None) == bool(faults)
+    assert contract is not None or faults
     return contract, [str(fault) for fault in sorted(faults)]
 
 
@@ -180,7 +180,7 @@ SLIPS = [
     ("[harbour, lantern]", "[harbour, lan/tern]",
      "4:19: expected the name of an asset, of letters, digits and . _ - &, found 'lan/tern'"),
     ("start: 2026-11-16", "start: 16.11.2026",
-     "5:8: expected a date such as '2026-11-16', found '16.11.2026'"),
+     "5:8: expected a date such as '2026-11-16', found '16.11.2026'; write '2026-11-16'"),
     ("start: 2026-11-16\n", "", "1:1: 'start' is missing in the contract"),
     ("day_count: 30/360\n", "", "1:1: 'day_count' is missing in the contract: 'sampler' pays by 'period'"),
     ("30/360", "30/365",
@@ -261,6 +261,16 @@ SLIPS = [
     ("{from: 2027-02-16, until", "{until", "12:10: 'from' is missing in the date rule"),
     ("{from: 2027-02-16, until: 2027-08-16, every: 3 months}", "{continuous: [2027-02-16, 2027-08-16]}",
      "12:11: 'dates' is a list of dates; only a watch term can be continuous"),
+    ("first_call: 2027-05-16", "first_call: 6.5.2027",
+     "16:15: expected a date such as '2026-11-16', a time such as '0.25y' or the name of another date term, "
+     "found '6.5.2027'; write '2027-05-06'"),
+    ("{continuous: [2026-12-01, dates.last]}", "continuously",
+     "17:12: expected dates, a rule of dates, the name of another date term, or '{continuous: [from, until]}', "
+     "found 'continuously'"),
+    ("[2027-02-18, 2027-05-19, 2027-08-18]", "quarterly",
+     "13:12: expected dates such as '[2026-11-16, 2027-05-17]', a rule such as '{from: 2026-11-16, until: 2027-11-16, "
+     "every: 3 months}', or the name of another date term, found 'quarterly'"),
+    ("812.40", "812,40", "11:22: expected a number, found '812,40'; write '812.40'"),
     ("[2026-12-01, dates.last]", "[2026-12-01]",
      "17:25: expected two dates, as in '{continuous: [from, until]}', found a list"),
     ("[2027-02-18, 2027-05-19, 2027-08-18]", "[]",
@@ -315,7 +325,71 @@ def test_all_faults_at_once():
         "c.yaml:2:11", "c.yaml:11:39", "c.yaml:14:19", "c.yaml:18:9"]
 
 
+def test_a_misspelt_key_is_not_missing_as_well():
+    """One slip, one fault: what was misspelt is known to be meant."""
+    for old, new in (("start", "strat"), ("settlement", "setlement"), ("calendar", "calender"),
+                     ("notional", "notionl"), ("day_count", "daycount")):
+        (fault,) = faults_of(f"\n{old}:", f"\n{new}:")
+        assert fault.endswith(f"'{new}' is not a key of the contract; did you mean '{old}'?")
+
+
+def test_terms_without_any_date_that_can_be_read():
+    """Where no date can be read and no key tells, it is not known that the contract goes by the calendar."""
+    text = TEXTBOOK.replace("{count: 4, until: 1y}", "{count: 4, until: 1yr}").replace("0.5y", "half a year")
+    assert [fault.split(": ")[0] for fault in parsed(text.replace("watched: dates", "watched: 1 y"))[1]] == [
+        "c.yaml:8:28", "c.yaml:11:15", "c.yaml:12:12"]
+
+
+def test_what_could_be_read_of_a_contract_at_fault():
+    """The dates of a contract stay readable beside a fault elsewhere; it says which terms have no value."""
+    contract, faults = parsed(WHOLE.replace("side: call", "side: caal"))
+    assert len(faults) == 1
+    assert contract.at_fault == {"side"} and contract.framed
+    contract, _ = parsed(WHOLE.replace("side: call", "syde: call"))
+    assert contract.at_fault == {"side", "cap"}  # the misspelt term may have been either
+    contract, _ = parsed(WHOLE.replace("start: 2026-11-16", "start: soon"))
+    assert contract.at_fault == frozenset() and not contract.framed
+    assert parsed(WHOLE)[0].framed
+
+
 def test_faults_of_the_definition_are_told_too():
     """A contract on a definition at fault is refused with the definition's faults at their places."""
     _, faults = parsed(WHOLE, DEFINITION.replace("pay: period", "pay: perriod"))
     assert faults == ["d.yaml:22:14: there is no 'perriod' here; did you mean 'period'?"]
+
+
+def test_terms_are_read_beside_faults_of_the_definition():
+    """A definition that is at fault in its events still says which terms there are, and of which type."""
+    text = WHOLE.replace("[100%, 95%, 90%]", "70").replace("side: call", "syde: call")
+    contract, faults = parsed(text, DEFINITION.replace("pay: period", "pay: perriod"))
+    assert contract.payoff.events == ()
+    assert [fault.split(": ")[0] for fault in faults] == ["c.yaml:14:12", "c.yaml:18:3", "d.yaml:22:14"]
+    _, faults = parsed(text, DEFINITION.replace("{type: flag, default: false}", "{type: flg}"))
+    assert [fault.split(": ")[0] for fault in faults] == ["d.yaml:12:22"]  # the terms themselves are at fault
+
+
+def test_what_stands_there_already_is_not_offered():
+    """For a term that is not known, only those that are still blank are offered."""
+    assert faults_of("  watched: {", "  barrier_watched: {") == [
+        "c.yaml:17:3: 'barrier_watched' is not a key of the terms of 'sampler'; did you mean 'watched'?"]
+    every = ("'initial', 'dates', 'barrier', 'weights', 'first_call', 'watched', 'side', 'paid_on', 'memory', 'payer' "
+             "or 'cap'")
+    assert faults_of("  side: call", "  side: call\n  zzz: 1") == [
+        f"c.yaml:19:3: 'zzz' is not a key of the terms of 'sampler'; expected {every}"]
+    assert faults_of("  side: call", "  zzz: call") == [
+        "c.yaml:11:3: 'side' is missing in the terms of 'sampler'",
+        "c.yaml:18:3: 'zzz' is not a key of the terms of 'sampler'; expected 'side'"]
+
+
+def test_money_per_unit_takes_no_notional():
+    """A strike of 100 times a notional would be an amount of nothing; where the definition does not say what it pays
+    either is taken."""
+    money, multiples = (DEFINITION.replace("terms:", f"pays: {what}\nterms:", 1)
+                        for what in ("money per unit", "multiples of the notional"))
+    units = WHOLE.replace("notional: 1000000", "units: 10")
+    assert parsed(WHOLE, money)[1] == [
+        "c.yaml:3:1: 'sampler' pays money per unit, which goes with 'units', not with 'notional'"]
+    assert parsed(units, multiples)[1] == [
+        "c.yaml:3:1: 'sampler' pays multiples of the notional, which goes with 'notional', not with 'units'"]
+    for text, definition in ((units, money), (units, DEFINITION), (WHOLE, multiples), (WHOLE, DEFINITION)):
+        assert parsed(text, definition)[1] == []

@@ -8,7 +8,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from mcx.checked.formula import Binary, Name, Number
+from mcx.checked.formula import Binary, ChoiceIs, Formula, Name, Number, OfAsset, walk
 from mcx.checked.kinds import Kind
 from mcx.checked.payoff import Assign, At, Continuous, End, Pay, Payoff
 from mcx.checked.read_payoff import read_payoff
@@ -196,6 +196,8 @@ def test_of_knows_the_contracts_assets():
     ("old", "new", "fault"),
     [
         ("about: A", "abuot: A", "2:1: 'abuot' is not a key of the payoff; did you mean 'about'?"),
+        ("about: A", "pays: money\nabout: A", "2:7: expected what its amounts are: 'money per unit' or 'multiples of the "
+                                             "notional', found 'money'"),
         ("payoff: memory_note", "payoff: Memory Note",
          "1:9: expected a name of lower-case letters, digits and '_', found 'Memory Note'"),
         ("{type: level}", "{typ: level}", "4:18: 'typ' is not a key of the term 'initial'; did you mean 'type'?"),
@@ -210,10 +212,10 @@ def test_of_knows_the_contracts_assets():
         ("above: 0%", "above: 300%", "8:17: no number keeps these bounds"),
         ("above: 0%", "above: 0%, at_least: 1%", "8:63: 'at_least' and 'above' bound the same side; keep one"),
         ("{type: watch}", "{type: watch, above: 1}", "10:31: 'above' does not go with the type 'watch'"),
-        ("at_least: 0}", "at_least: .inf}", "11:55: expected a finite number, found '.inf'"),
-        ("at_least: 0}", "default: 3}", "11:51: the term 'rebate' is optional and has a default; keep one of the two"),
+        ("at_least: 0}", "at_least: .inf}", "11:58: expected a finite number, found '.inf'"),
+        ("at_least: 0}", "default: 3}", "11:48: the term 'rebate' is optional and has a default; keep one of the two"),
         ("optional: true", "optional: yes", "11:42: expected true or false, found 'yes'; write true"),
-        ("of: [plain, one touch]", "of: [plain, plain]", "12:43: the word 'plain' stands twice"),
+        ("of: [plain, one touch]", "of: [plain, plain]", "12:44: the word 'plain' stands twice"),
         (", of: [plain, one touch]", "", "12:17: 'of' is missing in the term 'kind': the list of its words"),
         ("default: true", "default: maybe", "13:39: expected true or false, found 'maybe'"),
         ("{type: asset}", "{type: asset, default: harbour}",
@@ -277,7 +279,7 @@ def test_of_knows_the_contracts_assets():
          "44:9: expected an action: 'pay: FORMULA', 'set: {NAME: FORMULA}' or 'end', found 'stop'"),
         ("    end:\n", "    end: now\n", "48:10: expected nothing behind 'end', found 'now'"),
         ("    end:\n", "    end:\n    pay: 1\n",
-         "48:5: 'end' is a second action beside 'pay'; begin it on a line of its own, under 'then' or in its own event"),
+         "49:5: 'pay' is a second action beside 'end'; begin it on a line of its own, under 'then' or in its own event"),
         ("    end:\n", "    name: nothing\n",
          "47:5: nothing happens at this event: expected 'pay', 'set', 'end', or 'if' and 'then'"),
         ("given(rebate)", "given(coupon)",
@@ -375,6 +377,44 @@ def test_every_definition_of_the_library_is_read(file):
     fewest, most = payoff.assets
     for assets in range(fewest, (most or 3) + 1):
         assert read_payoff(document, assets=assets, asset_names=tuple("abc"[:assets]))[1] == []
+
+
+def formulas_of(payoff: Payoff) -> list[Formula]:
+    """Every formula of a definition."""
+    found = [let.formula for let in payoff.lets]
+    found += [formula for one in payoff.running for formula in (one.formula, one.start)]
+    for event in payoff.events:
+        found.append(event.condition)
+        for action in (*event.then, *event.otherwise):
+            found += [action.amount] if isinstance(action, Pay) else []
+            found += [right for _, right in action.values] if isinstance(action, Assign) else []
+    return [formula for formula in found if formula is not None]
+
+
+def dates_of(payoff: Payoff) -> list[str]:
+    """Every date, dates and watch term that something of a definition goes by."""
+    found = [term.per for term in payoff.terms]
+    for one in payoff.running:
+        found += [one.at.name] if isinstance(one.at, At) else []
+        found += [one.at.start.name, one.at.end.name] if isinstance(one.at, Continuous) else []
+    for event in payoff.events:
+        found += [event.at.name, event.since, event.until]
+        found += [action.due for action in (*event.then, *event.otherwise) if isinstance(action, Pay)]
+    return found
+
+
+@pytest.mark.parametrize("file", LIBRARY, ids=lambda file: file.stem)
+def test_every_name_of_the_library_is_explained_and_used(file):
+    """Definitions say what each term is, have no default, and hold no name that nothing reads."""
+    (document,), _ = parse_documents(file.read_bytes(), file.name)
+    payoff, _ = read_payoff(document)
+    assert payoff.about
+    assert all(term.about and term.default is None for term in payoff.terms)
+    read = {part.name for formula in formulas_of(payoff) for part in walk(formula) if isinstance(part, Name)}
+    read |= {part.term for formula in formulas_of(payoff) for part in walk(formula) if isinstance(part, ChoiceIs)}
+    read |= {part.asset for formula in formulas_of(payoff) for part in walk(formula) if isinstance(part, OfAsset)}
+    names = {one.name for one in (*payoff.terms, *payoff.lets, *payoff.running)}
+    assert names - read - set(dates_of(payoff)) == set()
 
 
 TEXTS = [WHOLE, *(file.read_text(encoding="utf-8") for file in LIBRARY)]

@@ -325,6 +325,64 @@ def test_lists_for_each_date_have_its_length():
                       "'paid_on' has 2 dates; 'observations' has 4 dates, 2027-02-16 to 2027-11-16"]
 
 
+def places(text: str, valuation: date = TODAY) -> list[str]:
+    """The places of all faults of a contract and its dates."""
+    documents, faults = parse_documents(text.encode(), "n.yaml")
+    asked, faults = checked_request(documents, faults)
+    (contract,) = asked.contracts
+    found, wrong = date_contract(contract, valuation)
+    assert found is None
+    return [f"{fault.place.line}:{fault.place.column}" for fault in sorted({*faults, *wrong})]
+
+
+SEASONED = f"""\
+{HEAD}  barrier: {{type: percent, per: observations}}
+  early: {{type: dates}}
+  late: {{type: date}}
+events:
+  - at: observations
+    if: spot > barrier
+    then: [pay: 1]
+  - at: early
+    until: late
+    pay: 1
+---
+{CONTRACT}  barrier: 50%
+  early: [2026-11-20, 2026-11-23, 2027-01-08]
+  late: 2027-02-01
+"""
+
+
+@pytest.mark.parametrize(("old", "new", "place"), [
+    ("barrier: 50%", "barrier: [50%, 40%]", "26:12"),  # a list that does not fit
+    ("barrier: 50%", "barrier: 50", "26:12"),  # a term that cannot be read
+    ("until: 2027-11-16", "until: 2027-11-20", "25:43"),  # a rule that does not end where it says
+    ("currency: EUR", "currency: euro", "16:11"),
+    ("\n  barrier: 50%", "", "25:3"),
+])
+def test_dates_are_judged_beside_other_faults(old: str, new: str, place: str):
+    """Dates before the valuation date are told in the same round as what is wrong elsewhere in the contract."""
+    assert SEASONED.count(old) == 1
+    early = "27:11" if new else "26:11"
+    assert sorted(places(SEASONED.replace(old, new))) == sorted([place, early])
+
+
+def test_dates_that_hang_on_what_cannot_be_read_are_not_judged():
+    """Which dates are meant is not known while the term that narrows them is at fault."""
+    assert places(SEASONED.replace("late: 2027-02-01", "late: soon")) == ["28:9"]
+    assert places(SEASONED.replace("until: late", "from: late").replace("late: 2027-02-01", "late: x")) == ["28:9"]
+
+
+def test_past_dates_are_told_once_for_each_term():
+    """However many dates of a term have passed, they are one fault, at the first of them."""
+    contract = CONTRACT.replace("{from: 2027-02-16, until: 2027-11-16, every: 3 months}",
+                                "{from: 2026-11-16, until: 2027-11-16, every: 1 business day}")
+    assert dated(contract=contract)[1] == [
+        "11 dates, 2026-11-16 to 2026-11-30, lie before the valuation date 2026-12-01; a seasoned trade needs "
+        "fixings, which a later version reads"]
+    assert places(SEASONED) == ["27:11"]
+
+
 def test_list_read_on_another_day():
     """A list for each date of a schedule cannot be read on a day that is none of them; one number can."""
     terms = "  barrier: {type: percent, per: observations}\n  final: {type: date}\n"
@@ -343,6 +401,7 @@ MEAN = "running:\n  mean_level: {average: spot, at: observations}\n"
 def test_running_value_read_before_its_first_date():
     """Reading before anything was observed is a fault of the dates that the contract gives."""
     terms, events = "  early: {type: date}\n", "  - at: early\n    pay: mean_level / 100\n"
+    events += "  - at: observations.last\n    pay: mean_level\n"
     _, faults = dated(terms=terms, parts=MEAN, events=events, more="  early: 2027-01-15\n")
     assert faults == ["'mean_level' is read on 2027-01-15 (n.yaml:9:10), but begins on 2027-02-16"]
     assert dated(terms=terms, parts=MEAN, events=events, more="  early: 2027-02-16\n")[1] == []
@@ -415,6 +474,90 @@ def test_running_values_that_nothing_reads_are_left_out():
     assert found.last.date == date(2027, 11, 16)
 
 
+FINAL = "  final: {type: date}\n"
+PAID_ON_FINAL = "  - at: final\n    pay: (mean_level / 100) if spot > 1 else 1\n"
+
+
+@pytest.mark.parametrize(("parts", "terms", "more", "place", "fault"), [
+    (MEAN, "", "", "21:17",
+     "'mean_level' is observed until 2027-11-16, but read for the last time on 2027-06-16 (n.yaml:9:11); expected no "
+     "date of 'observations' after that"),
+    (MEAN.replace("at: observations", "at: fixings"), "  fixings: {type: dates}\n",
+     "  fixings: [2027-01-15, 2027-06-16, 2027-06-17]\n", "24:37",
+     "'mean_level' is observed until 2027-06-17, but read for the last time on 2027-06-16 (n.yaml:10:11); expected no "
+     "date of 'fixings' after that"),
+    (MEAN.replace("average: spot, at: observations", "lowest: spot, at: watched"), "  watched: {type: watch}\n",
+     "  watched: {continuous: [2026-12-01, observations.last]}\n", "24:38",
+     "'mean_level' is observed until 2027-11-16, but read for the last time on 2027-06-16 (n.yaml:10:11); expected no "
+     "date of 'watched' after that"),
+    (MEAN.replace("average: spot, at: observations",
+                  "lowest: spot, at: {continuous: [observations.first, observations.last]}"), "", "", "21:17",
+     "'mean_level' is observed until 2027-11-16, but read for the last time on 2027-06-16 (n.yaml:9:11); expected no "
+     "date of 'observations' after that"),
+])
+def test_observations_after_the_last_reading(parts: str, terms: str, more: str, place: str, fault: str):
+    """An average or a watch that the contract lets run past the payment is refused at its last date."""
+    text = f"{HEAD}{FINAL}{terms}{parts}events:\n{PAID_ON_FINAL}---\n{CONTRACT}  final: 2027-06-16\n{more}"
+    more = f"  final: 2027-06-16\n{more}"
+    assert dated(terms=FINAL + terms, parts=parts, events=PAID_ON_FINAL, more=more)[1] == [fault]
+    assert places(text) == [place]
+
+
+def test_what_is_read_to_the_end_may_be_observed_to_the_end():
+    """A value read on the last day of its observation, by a payment or through another value, is no fault; nor is one
+    that the definition reads on some dates only of its own schedule."""
+    pays = "  - at: observations.last\n    pay: mean_level\n"
+    assert dated(parts=MEAN, events=pays)[1] == []
+    assert dated(parts=MEAN, events=pays.replace("last", "but_last"))[1] == []
+    through = MEAN + "  top: {highest: mean_level, at: observations}\n"
+    assert dated(parts=through, events=pays.replace("pay: mean_level", "pay: top"))[1] == []
+    late = "  - at: final\n    pay: mean_level\n"
+    assert dated(terms=FINAL, parts=MEAN, events=late, more="  final: 2027-12-16\n")[1] == []
+
+
+COUNTED = """\
+running:
+  seen: {start: 0}
+"""
+COUNTS = """\
+  - at: days
+    set: {seen: seen + 1}
+  - at: observations
+    pay: 1 / seen
+  - at: observations
+    set: {seen: 0}
+"""
+DAYS = "  days: {type: dates}\n"
+
+
+def test_a_period_without_any_day():
+    """What would divide by 0 whatever happens is refused, at each of the dates that let nothing be counted."""
+    days = "  days: [2027-01-15, 2027-03-01, 2027-03-02]\n"
+    _, faults = dated(terms=DAYS, parts=COUNTED, events=COUNTS, more=days)
+    assert faults == ["on 2027-08-16 a formula divides by 'seen', which is 0 then (n.yaml:11:14)",
+                      "on 2027-11-16 a formula divides by 'seen', which is 0 then (n.yaml:11:14)"]
+    assert dated(terms=DAYS, parts=COUNTED, events=COUNTS, more=days.replace("]", ", 2027-08-16, 2027-11-16]"))[1] == []
+    listed = CONTRACT.replace("{from: 2027-02-16, until: 2027-11-16, every: 3 months}", "[2027-02-16, 2027-05-17]")
+    text = f"{HEAD}{DAYS}{COUNTED}events:\n{COUNTS}---\n{listed}  days: [2027-02-16]\n"
+    assert places(text) == ["25:30"]
+
+
+def test_a_count_that_hangs_on_the_path_is_not_judged():
+    """Where the levels decide whether a day counts, only the paths can tell whether a division is possible."""
+    counts = COUNTS.replace("seen + 1", "seen + (1 if spot > 90 else 0)")
+    days = "  days: [2027-01-15]\n"
+    assert len(dated(terms=DAYS, parts=COUNTED, events=counts, more=days)[1]) == 3
+    sometimes = counts.replace("  - at: observations\n    set: {seen: 0}",
+                               "  - at: observations\n    if: spot > 90\n    then: [set: {seen: 0}]")
+    assert dated(terms=DAYS, parts=COUNTED, events=sometimes, more=days)[1] == []
+    guarded = COUNTS.replace("pay: 1 / seen", "pay: (1 / seen) if seen > 0 else 0")
+    assert dated(terms=DAYS, parts=COUNTED, events=guarded, more=days)[1] == []
+    total = "running:\n  seen: {total: 1 if nth > 2 else 0, at: observations}\n"
+    divides = "  - at: observations.but_first\n    pay: 1 / seen\n"
+    assert dated(parts=total, events=divides)[1] == [
+        "on 2027-05-17 a formula divides by 'seen', which is 0 then (n.yaml:8:14)"]
+
+
 OPTIONAL = "  cap: {type: percent, optional: true}\n  capped: {type: flag}\n"
 CAPPED = "  - at: observations\n    pay: min(spot / 100, cap) if capped else (spot / 100)\n"
 
@@ -433,6 +576,26 @@ def test_optional_terms_that_do_not_count_are_refused():
     _, faults = dated(terms=OPTIONAL, events=CAPPED, more="  capped: false\n  cap: 120%\n")
     assert faults == ["'cap' is stated, but with these terms 'own' never reads it"]
     assert dated(terms=OPTIONAL, events=CAPPED, more="  capped: true\n  cap: 120%\n")[1] == []
+
+
+def test_what_is_read_but_not_stated():
+    """An optional term that counts, and a running value whose dates are not stated, are faults among the terms."""
+    text = f"{HEAD}{OPTIONAL}events:\n{CAPPED}---\n{CONTRACT}  capped: true\n"
+    assert places(text) == ["20:3"]
+    parts = "running:\n  low: {lowest: spot, at: fixings}\n"
+    terms, pays = "  fixings: {type: dates, optional: true}\n", "  - at: observations.last\n    pay: low\n"
+    assert dated(terms=terms, parts=parts, events=pays)[1] == [
+        "'low' is read on 2027-11-16 (n.yaml:9:10), but has no date"]
+    assert places(f"{HEAD}{terms}{parts}events:\n{pays}---\n{CONTRACT}") == ["21:3"]
+    found, faults = dated(terms=terms, parts=parts.replace("fixings}", "fixings, start: 90}"), events=pays)
+    assert faults == [] and all(not moment.updates for moment in found.moments)
+
+
+def test_a_start_reads_its_terms():
+    """A term that only the start of a running value reads does count."""
+    parts = "running:\n  top: {highest: spot, at: observations, start: cap}\n"
+    assert dated(terms=OPTIONAL.splitlines()[0] + "\n", parts=parts,
+                 events="  - at: observations.last\n    pay: top\n", more="  cap: 120%\n")[1] == []
 
 
 def test_events_that_never_happen_are_said():

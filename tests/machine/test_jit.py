@@ -67,3 +67,18 @@ def test_a_kernel_is_cold_until_it_is_compiled():
     run(asian(2), seed=SEED, paths=64)
     assert not is_cold("sweep") and is_cold("sweep_of_another_day")
     assert any(cache_folder().rglob("*.sweep-*.nbi"))
+
+
+@pytest.mark.skipif(not COMPILED, reason="nothing is compiled")
+def test_numba_finds_linear_algebra_when_somebody_needs_it():
+    """Loading the kernels loads none of scipy's, and numba's products of matrices work all the same afterwards."""
+    script = """
+import sys
+import numpy as np
+import mcx.machine.blocks
+assert "scipy.linalg" not in sys.modules
+import numba
+a = np.arange(6.0).reshape(2, 3)
+assert np.array_equal(numba.njit(lambda a, b: a @ b)(a, a.T), a @ a.T)
+"""
+    subprocess.run([sys.executable, "-c", script], check=True, cwd=Path(mcx.__file__).parent.parent)

@@ -215,19 +215,19 @@ def test_compiling_is_announced_only_when_it_happens(monkeypatch: pytest.MonkeyP
 
 
 def test_register_file_of_a_block_stays_in_the_cache():
-    """Lanes are whole groups, between 64 and 1024, and their registers take at most 256 KB where that is possible."""
+    """Lanes are whole groups, between 128 and 1024, and their registers take at most 256 KB where that is possible."""
     for rows in (1, 10, 56, 200, 300, 5000):
         lanes = lanes_for(rows)
-        assert lanes % 64 == 0 and 64 <= lanes <= 1024
-        assert lanes == 64 or lanes * rows * 8 <= 1 << 18
+        assert lanes % 64 == 0 and 128 <= lanes <= 1024
+        assert lanes == 128 or lanes * rows * 8 <= 1 << 18
 
 
 def test_batches_are_whole_blocks_and_short():
-    """A batch is a whole number of blocks, at most 2^17 paths, fewer for long programs; cost grows with dates."""
+    """A batch is a whole number of blocks, at most 2^19 paths, fewer for long programs; cost grows with dates."""
     for dates in (1, 52, 2000):
         code = prepare(asian(dates))
         lanes = lanes_for(code.rows)
         batch = batch_for(code, lanes)
-        assert batch % lanes == 0 and lanes <= batch <= 1 << 17
+        assert batch % lanes == 0 and lanes <= batch <= 1 << 19
         assert batch * cost(asian(dates)) < 3e8
     assert cost(asian(2000)) / cost(asian(1000)) == pytest.approx(2.0, rel=0.01)

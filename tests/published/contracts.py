@@ -84,8 +84,8 @@ def barrier_rebate_at_hit(c: dict) -> Terms:
 
 
 def double_knock_out(c: dict) -> Terms:
-    stated = {"side": c["kind"], "knock": "out"} | {key: c[key] for key in ("strike", "lower", "upper")}
-    return "double_barrier", stated | {"watched": always_watched(c)}
+    stated = {"side": c["kind"], "knock": "out", "strike": c["strike"]}
+    return "double_barrier", stated | {"lower_barrier": c["lower"], "upper_barrier": c["upper"]} | {"watched": always_watched(c)}
 
 
 def cash_at_hit(c: dict) -> Terms:
@@ -108,7 +108,7 @@ def exchange(c: dict) -> Terms:
 
 def on_extreme(c: dict) -> Terms:
     which = "best" if c["extreme"] == "max" else "worst"
-    return "rainbow_option", {"side": c["kind"], "which": which, "initial": 1, "strike": c["strike"]}
+    return "rainbow_option", {"side": c["kind"], "which": which, "initial": 1, "strike": percent(c["strike"])}
 
 
 def correlation_call(c: dict) -> Terms:
@@ -121,7 +121,8 @@ def two_asset_digital(c: dict) -> Terms:
 
 def basket_alike(c: dict) -> Terms:
     weights = ", ".join(f"{name}: {1 / c['assets']!r}" for name in names(c))
-    return "basket_option", {"side": c["kind"], "initial": 1, "weights": f"{{{weights}}}", "strike": c["strike"]}
+    return "basket_option", {"side": c["kind"], "initial": 1, "weights": f"{{{weights}}}",
+                             "strike": percent(c["strike"])}
 
 
 def forward_start(c: dict) -> Terms:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
-from hypothesis import given
+from hypothesis import given, settings
 from strategies import inputs_for, tapes
 
 from mcx.machine.run import Stream, draws, values_by_path
@@ -14,6 +14,7 @@ from mcx.tape.registers import lower
 SEED, PATHS = 6620133847715590231, 64
 
 
+@settings(max_examples=300)  # generated tapes are much alike, so that fifty are too few
 @given(tapes())
 def test_kernel_and_interpreter_agree(tape: Tape):
     """On the kernel's own draws, a random tape has the same outputs by the interpreter and by the kernel, on every

@@ -11,7 +11,7 @@ from mcx.text.documents import parse_documents, read_documents
 def test_kinds_are_told_by_keys(tmp_path):
     """contract, market or quote among the top keys says what a document is; else it is a payoff."""
     file = tmp_path / "all.yaml"
-    file.write_text("payoff: a\n---\npayoff: b\ncontract: c\n---\nrates: 1\nmarket: 0y\n---\nquote: 3\n---\nx: 1\n")
+    file.write_text("payoff: a\n---\npayoff: b\ncontract: c\n---\nrates: 1\nmarket: 0y\n---\nquote: 3\n---\nevents: 1\n")
     documents, faults = read_documents([file])
     assert faults == []
     assert [document.kind for document in documents] == ["payoff", "contract", "market", "quote", "payoff"]
@@ -25,6 +25,17 @@ def test_a_document_of_two_kinds():
     assert documents == []
     assert [str(fault) for fault in faults] == [
         "f.yaml:2:1: 'market' cannot stand in one document with 'contract'; put '---' between two documents"]
+
+
+def test_a_document_of_no_kind():
+    """A document that no key tells is one fault, at the key that was misspelt, not a list of what a payoff lacks."""
+    kinds = "a document that begins with 'contract', 'market', 'quote' or 'payoff'"
+    for text, found in (("contrct: Call\npayoff: european\n", "1:1: {}, found 'contrct'; did you mean 'contract'?"),
+                        ("rates: {}\nmarkt: 0y\n", "2:1: {}, found 'markt'; did you mean 'market'?"),
+                        ("rates: {}\nassets: {}\n", "1:1: {}, found 'rates'"), ("{}\n", "1:1: {}, found a mapping")):
+        documents, faults = parse_documents(text.encode(), "f.yaml")
+        assert documents == []
+        assert [str(fault) for fault in faults] == ["f.yaml:" + found.format(f"expected {kinds}")]
 
 
 def test_a_document_that_is_no_mapping():

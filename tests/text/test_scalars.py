@@ -54,6 +54,12 @@ def test_units_round_once(whole, places, unit):
         ("1e999", "expected a finite number, found '1e999'; it is too large"),
         ("1_000", "expected a number, found '1_000'; write '1000'"),
         ("1,000.50", "expected a number, found '1,000.50'; write '1000.50'"),
+        ("1,000", "expected a number, found '1,000'; write '1000' or '1.000'"),
+        ("4210,50", "expected a number, found '4210,50'; write '4210.50'"),
+        ("-,5 %", "expected a number, found '-,5 %'; write '-0.5 %'"),
+        ("1,00,00", "expected a number, found '1,00,00'"),
+        ("80bps", "expected a number, found '80bps'; write '80 bp'"),
+        ("12.5 basis points", "expected a number, found '12.5 basis points'; write '12.5 bp'"),
         ("010", "expected a number, found '010'; write it without the leading zero"),
         ("0x1f", "expected a number, found '0x1f'"),
         ("12:30", "expected a number, found '12:30'"),
@@ -115,7 +121,8 @@ def test_dates():
     """ISO dates that exist."""
     assert scalars.date(plain("2028-02-29")) == datetime.date(2028, 2, 29)
     assert fault(scalars.date(plain("2026-02-29"))) == "expected a day of the calendar, found '2026-02-29'"
-    assert fault(scalars.date(plain("16.11.2026"))) == "expected a date such as '2026-11-16', found '16.11.2026'"
+    assert fault(scalars.date(plain("16.11.2026"))) == (
+        "expected a date such as '2026-11-16', found '16.11.2026'; write '2026-11-16'")
     assert fault(scalars.date(plain("20261116"))) == "expected a date such as '2026-11-16', found '20261116'"
 
 

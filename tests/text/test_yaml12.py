@@ -178,6 +178,22 @@ def test_braces_that_cut_no_formula(text):
     assert not any("was cut" in fault for fault in faults_of(text + "\n"))
 
 
+@pytest.mark.parametrize(("text", "values"), [
+    ("{vol: 17,5%}", {"vol": "17,5%"}),
+    ("{1y: 2,0 %, 2y: -2,15%, 3y: 3}", {"1y": "2,0 %", "2y": "-2,15%", "3y": "3"}),
+    ("{notional: 1,000,000.50, units: 1}", {"notional": "1,000,000.50", "units": "1"}),
+    ("{a: 1, 5}", {"a": "1", "5": ""}),  # a blank behind the comma: two entries
+    ("{a: 1,5: 2}", {"a": "1", "5": "2"}),
+    ("{a: x,5}", {"a": "x", "5": ""}),
+    ("{a: '1',5}", {"a": "1", "5": ""}),
+])
+def test_numbers_with_commas_in_braces(text, values):
+    """A number cut at a decimal comma or between thousands is put together again, for its reader to refuse."""
+    (node,), faults = read_yaml(text.encode(), "f.yaml")
+    assert faults == []
+    assert {key.text: value.text for key, value in node.entries} == values
+
+
 def test_an_alias_bomb_is_refused():
     """Nodes are counted with aliases expanded, before anybody walks them."""
     lines = ["a0: &a0 [x, x, x, x, x, x, x, x, x, x]"]
