@@ -12,7 +12,7 @@ from mcx.machine.bridges import bridge_range, corridor
 from mcx.machine.forms import Form
 from mcx.machine.jit import jit
 from mcx.machine.rows import borrowed, wide_vectors
-from mcx.machine.special import exp_row, log_row
+from mcx.machine.special import exp_negative, exp_row, log_row
 from mcx.tape.bridges import CLOSEST, LEAST_EXPONENT
 
 
@@ -27,7 +27,7 @@ def forward(registers, code, scalars, lanes):
             _arithmetic(form, y, registers, scalars, a, b, lanes)
         elif form < Form.STEP_RSR:
             _logic(form, y, registers, scalars, a, b, c, lanes)
-        elif form < Form.CLEAR_EXPONENT_RRS:
+        elif form < Form.CLEAR_RRS:
             _model(form, y, registers, scalars, a, b, c, d, lanes)
         else:
             _watch(form, y, registers, scalars, a, b, c, d, lanes)
@@ -210,11 +210,27 @@ def _model(form, y, registers, scalars, a, b, c, d, lanes):
 def _watch(form, y, registers, scalars, a, b, c, d, lanes):
     wide_vectors()
     registers, scalars = borrowed(registers), borrowed(scalars)
-    if form == Form.CLEAR_EXPONENT_RRS:  # both sides of each `if` are computed: a branch would stop vectorisation
+    if form == Form.CLEAR_RRS:  # both sides of each `if` are computed: a branch would stop vectorisation
         p, q, s = registers[a], registers[b], scalars[c]
         for i in range(lanes):
-            exponent = s * p[i] * q[i]
-            y[i] = exponent if min(p[i], q[i]) > 0.0 else 0.0
+            chance = 1.0 - exp_negative(min(s * p[i] * q[i], 0.0))
+            y[i] = chance if min(p[i], q[i]) > 0.0 else 0.0
+    elif form == Form.CORRIDOR_RRSS:
+        p, q, w, s = registers[a], registers[b], scalars[c], scalars[d]
+        counts = 0  # lanes where the bridge crosses nearly all of the corridor: hardly ever any
+        for i in range(lanes):
+            low = exp_negative(min(p[i] * q[i] * s, 0.0))
+            high = exp_negative(min((p[i] - w) * (q[i] - w) * s, 0.0))
+            chance = max(1.0 - low - high, 0.0)
+            y[i] = chance if (min(p[i], q[i]) > 0.0) & (max(p[i], q[i]) < w) else 0.0
+            counts += w * (w - abs(p[i] - q[i])) * s > LEAST_EXPONENT
+        if counts > 0:
+            for i in range(lanes):
+                far = w * (w - abs(p[i] - q[i])) * s
+                if far > LEAST_EXPONENT and min(p[i], q[i]) > 0.0 and max(p[i], q[i]) < w:
+                    low = exp_negative(min(p[i] * q[i] * s, 0.0))
+                    high = exp_negative(min((p[i] - w) * (q[i] - w) * s, 0.0))
+                    y[i] = max(1.0 - low - high + exp_negative(far), 0.0)
     elif form == Form.IMAGE_RRSS:
         p, q, s, t = registers[a], registers[b], scalars[c], scalars[d]
         for i in range(lanes):

@@ -152,11 +152,8 @@ class _Writer:
                     variance, log = self.constant(1.0), product
                 self.choose(op, to, x0, x1, variance, log)
             case Op.BRIDGE_CLEAR, d0, d1, variance if variance < 0:
-                exponent, chance = self.scratch(), self.scratch()
                 rate = self.constant(-2.0 / self.scalars[-1 - variance] if self.scalars[-1 - variance] else -np.inf)
-                self.emit(Form.CLEAR_EXPONENT_RRS, exponent, self.row(d0), self.row(d1), rate)
-                self.emit(Form.EXP_R, chance, exponent)
-                self.emit(Form.SUB_SR, to, self.constant(1.0), chance)
+                self.emit(Form.CLEAR_RRS, to, self.row(d0), self.row(d1), rate)
             case Op.BRIDGE_CORRIDOR, d0, d1, width, variance if width < 0 and variance < 0:
                 self.corridor(to, d0, d1, width, self.scalars[-1 - variance])
             case _:
@@ -170,8 +167,10 @@ class _Writer:
         if not usual or variance / (w * w) > LONG_STEP:
             return self.choose(Op.BRIDGE_CORRIDOR, to, d0, d1, width, self.constant(variance))
         d0, d1 = self.row(d0), self.row(d1)
-        exponent, image, other, total = (self.scratch() for _ in range(4))
         reach, rate = 2.0 * w * w / variance, self.constant(-2.0 / variance)
+        if reach > -LEAST_EXPONENT:
+            return self.emit(Form.CORRIDOR_RRSS, to, d0, d1, width, rate)
+        exponent, image, other, total = (self.scratch() for _ in range(4))
         numbers = sorted(range(-IMAGES, IMAGES + 1), key=abs)
         for n in (n for n in numbers if min(n * n, (n + 1) ** 2) * reach < -LEAST_EXPONENT):
             self.emit(Form.IMAGE_RRSS, exponent, d0, d1, self.constant(n * w), rate)

@@ -26,6 +26,8 @@ _DEAR = {
     Form.POW_RR: 15.0,
     Form.BRIDGE_LOW_RRSR: 0.8,
     Form.BRIDGE_HIGH_RRSR: 0.8,
+    Form.CLEAR_RRS: 1.0,
+    Form.CORRIDOR_RRSS: 2.0,
     Form.BRIDGE_CLEAR_RRR: 6.0,
     Form.BRIDGE_CORRIDOR_RRRR: 90.0,
     Form.BRIDGE_RANGE_RRRR: 900.0,

@@ -200,3 +200,16 @@ def test_drawn_ranges_are_the_quantiles_of_their_law():
     made = program([(Op.BRIDGE_RANGE, 3, 0, 1, -1, 2)], rows=4, outputs=[3], scalars=[0.7])
     found = range_below(on_rows(made, rows)[0], rows[0], rows[1], 0.7)
     np.testing.assert_allclose(found, rows[2], rtol=1e-6, atol=1e-12)
+
+
+@pytest.mark.parametrize("spread", [1e-3, 0.01, 0.049, 0.2, 0.59, 0.61, 3.0])
+def test_corridor_in_every_kind_of_step(spread: float):
+    """Short steps, longer and long ones have loops of their own; bridges along a barrier and from one barrier to the
+    other are where images count."""
+    rng = np.random.default_rng(771320947)
+    near, width = 10.0 ** rng.uniform(-4.0, -0.5, (2, 64)), 0.8
+    rows = np.where(rng.uniform(size=(2, 64)) < 0.5, near, width - near)
+    made = program([(Op.BRIDGE_CORRIDOR, 2, 0, 1, -1, -2)], rows=3, outputs=[2], scalars=[width, spread * width**2])
+    expected = bridge_corridor(rows[0], rows[1], width, spread * width**2)
+    np.testing.assert_allclose(on_rows(made, rows)[0], expected, rtol=0.0, atol=1e-14)
+    assert np.count_nonzero((expected > 1e-3) & (expected < 0.999)) > 5

@@ -23,7 +23,7 @@ def forms_of(code: KernelCode) -> list[Form]:
 def test_every_form_belongs_to_an_operation_or_is_known_to_stand_alone():
     """A form is named after its operation and kinds of operands; some are the machine's own."""
     named = {form for forms in FORMS.values() for form in forms}
-    assert set(Form) - named == {Form.FILL_S, Form.DRIFT_STEP_RSSR, Form.CLEAR_EXPONENT_RRS, Form.IMAGE_RRSS,
+    assert set(Form) - named == {Form.FILL_S, Form.DRIFT_STEP_RSSR, Form.CLEAR_RRS, Form.CORRIDOR_RRSS, Form.IMAGE_RRSS,
                                 Form.FAR_RRRS, Form.INSIDE_RRRS}
     for op, forms in FORMS.items():
         assert all(len(kinds(form)) == OPS[op].arity for form in forms if op is not Op.LOOKUP)
