@@ -385,9 +385,9 @@ def test_a_watch_read_inside_its_window_covers_up_to_that_day():
     dates = {"asked": (0.25, 0.5, 1.0, 2.0)}
     dated = made(dates, [event("asked", pay("x"))], [running("x", "lowest", "spot", "asked", start="95")],
                  watched={"x": (0.25, 1.0)})
-    levels = {"low": {(0, 0.25, 0.5): 90.0, (0, 0.5, 1.0): 80.0}, 0: {0.25: 99.0, 1.0: 85.0}}
+    levels = {"low": {(0, 0.25, 0.5): 90.0, (0, 0.5, 1.0): 80.0}, 0: {0.25: 92.0, 1.0: 85.0}}
     found = results(dated, levels)
-    assert found["price"] == pytest.approx(discounted((95.0, 0.25), (90.0, 0.5), (80.0, 1.0), (80.0, 2.0)))
+    assert found["price"] == pytest.approx(discounted((92.0, 0.25), (90.0, 0.5), (80.0, 1.0), (80.0, 2.0)))
 
 
 @pytest.mark.parametrize(
