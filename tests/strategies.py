@@ -18,7 +18,7 @@ NORMALS, UNIFORMS, LEAVES = 3, 2, 4
 TIMES = (0.0, 0.25, 0.5, 1.0)
 NUMBER_OPS = (Op.ADD, Op.SUB, Op.MUL, Op.NEG, Op.MIN, Op.MAX, Op.ABS, Op.STEP, Op.SELECT)
 GUARDED_OPS = (Op.DIV, Op.POW, Op.EXP, Op.LOG, Op.SQRT, Op.BRIDGE_LOW, Op.BRIDGE_HIGH, Op.BRIDGE_CLEAR,
-               Op.BRIDGE_CORRIDOR, Op.LOOKUP)
+               Op.BRIDGE_CORRIDOR, Op.BRIDGE_MOMENT, Op.LOOKUP)
 FLAG_OPS = (Op.LT, Op.LE, Op.EQ, Op.NE, Op.AND, Op.OR, Op.NOT)
 
 
@@ -108,6 +108,7 @@ def _grow(rng: np.random.Generator, raw: RawTape, uniforms: list[int]) -> None:
             raw.put(op, number(), number(), positive)
         elif op is Op.BRIDGE_CORRIDOR:
             raw.put(op, number(), number(), positive, raw.put(Op.ADD, positive, raw.constant(0.1)))
+            raw.put(op, number(), number(), raw.constant(one_of((0.5, 3.0))), raw.constant(one_of((0.05, 0.5))))
         elif op is Op.LOOKUP:  # its entries are the same on every path
             raw.put(op, number(), *(raw.constant(entry) for entry in (1.5, -2.0, 0.25)))
         elif op is Op.POW:
