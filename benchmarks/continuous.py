@@ -2,8 +2,8 @@
 
 For a down-and-out call, a double knock-out call and a one-touch paid at the hit, the flag is read on every date. Prints
 the time for a path and date on one thread, the ratio to the discrete watch (medians of several runs, the two in turn),
-how many times fewer paths the weights need than drawn flags for the same error, and for a worst-of the cost and width of
-its bounds by the number of pieces.
+the variance and time of drawn flags over those of weights, and for a worst-of the cost and width of its bounds by the
+number of pieces.
 
     python benchmarks/continuous.py
 """

@@ -47,8 +47,8 @@ class _Check:
             if isinstance(action, Pay):
                 formulas.append(action.amount)
                 if action.due in self.terms and self.terms[action.due].type == "dates":
-                    yield Fault(action.place, f"'{action.due}' has a date for each date of a schedule, and the moment of "
-                                              f"a hit is none of them; expected a 'date' term or 'same day'")
+                    yield Fault(action.place, f"'{action.due}' has a date for each date of a schedule, and the moment "
+                                              f"of a hit is none of them; expected a 'date' term or 'same day'")
             elif isinstance(action, Assign):
                 formulas += [right for _, right in action.values]
         for formula in formulas:

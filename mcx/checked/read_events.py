@@ -195,8 +195,8 @@ class EventReader:
     def at(self, node: Node, *, types: tuple[str, ...]) -> At | None:
         """When something happens; `types` are the types of term that may say it."""
         if isinstance(node, Mapping) and "once" in node:
-            self.faults.append(Fault(node.key("once").place, "'once', the moment of a hit, is for events; a running value "
-                                                             "is observed on dates or continuously"))
+            self.faults.append(Fault(node.key("once").place, "'once', the moment of a hit, is for events; a running "
+                                                             "value is observed on dates or continuously"))
             return None
         found = AT.fullmatch(node.text) if isinstance(node, Scalar) else None
         if not found:

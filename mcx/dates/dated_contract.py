@@ -76,9 +76,9 @@ class DatedEvent:
 class DatedHit:
     """An event at the moment at which a continuously watched flag first holds.
 
-    `days` are the calendar days of the watch, its first one included; `due` gives for each Pay action, for a hit on each
-    of them, when the amount is paid. A textbook contract has no days: there `due` holds the fixed dates only (one entry),
-    and what has none is paid at the moment itself.
+    `days` are the calendar days of the watch, its first one included; `due` gives for each Pay action, for a hit on
+    each of them, when the amount is paid. A textbook contract has no days: there `due` holds the fixed dates only (one
+    entry), and what has none is paid at the moment itself.
     """
 
     event: Event

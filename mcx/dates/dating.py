@@ -308,8 +308,8 @@ def _only(dated: DatedContract, live: frozenset[str], idle: frozenset[Place]) ->
     today = [f"the observation on {moment.day}, the valuation date, uses the market's spot"
              for moment in moments[:1] if moment.day.date and moment.day.date == dated.valuation]
     hits = tuple(hit for hit in dated.hits if hit.event.place not in idle)
-    by_day = [f"a hit of '{hit.watch.running.name}' counts for the calendar day on which it comes, weekends and holidays "
-              f"included; a day runs from one close to the next" for hit in hits if hit.due and hit.days]
+    by_day = [f"a hit of '{hit.watch.running.name}' counts for the calendar day on which it comes, weekends and "
+              f"holidays included; a day runs from one close to the next" for hit in hits if hit.due and hit.days]
     return replace(dated, moments=tuple(moments), watches=watches, hits=hits,
                    assumptions=(*dated.assumptions, *today, *dict.fromkeys(by_day)))
 

@@ -41,7 +41,8 @@ class Valuation:
     """Every output of a contract's tape with its error.
 
     outputs and results belong together, price first; `stages` is the price at a quarter, half and all of the paths;
-    `seconds` the time of the main run; `ready` the contract as it was run, with refined steps; `refinement` how fine the steps are, where the price lies between bounds.
+    `seconds` the time of the main run; `ready` the contract as it was run, with refined steps; `refinement` how fine
+    these are, where the price lies between bounds.
     """
 
     outputs: tuple[Output, ...]

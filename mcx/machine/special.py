@@ -58,7 +58,7 @@ def exp_row(y, x, lanes):
 
 @jit
 def exp_negative(x):
-    """exp(x) for x of at most 0, to 1.5 ulp, and 0 where it is below 1e-303: in a loop of other things it is no call."""
+    """exp(x) for x of at most 0, to 1.5 ulp, 1e-304 where it is less: in a loop of other things it is no call."""
     a = max(x, -_EXP_USUAL + 8.0)
     rounded = a * _LOG2_E + _ROUNDER
     k = rounded - _ROUNDER

@@ -80,8 +80,8 @@ class _Reader:
         return {Op.LEVEL: max, Op.LOW: min, Op.HIGH: max}[op](level for _, level in found)
 
     def moment(self, key: LevelKey, barrier: float) -> float:
-        """Which part of a stretch has passed on the first given date with a level beyond the barrier; a textbook contract,
-        which has no days, pays at the stretch's end."""
+        """Which part of a stretch has passed on the first given date with a level beyond the barrier; a textbook
+        contract, which has no days, pays at the stretch's end."""
         found = [(time, level) for time, level in self.given[key.asset]
                  if key.start - SAME_TIME <= time <= key.time + SAME_TIME]
         beyond = [time for time, level in found[1:] if (level - barrier) * (found[0][1] - barrier) <= 0.0]

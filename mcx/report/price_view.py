@@ -87,8 +87,8 @@ def _bounds(result: PriceResult, scale: Scale) -> str:
     low, high, width, target = (scale.show(number, places) for number in
                                 (bracket.lower, bracket.upper, bracket.width, bracket.target))
     close = "closer than" if bracket.reached else "not closer than"
-    return (f"{low} to {high}{scale.sign}: the price is the middle; how several assets are watched together is known between "
-            f"bounds only, {width}{scale.sign} apart, {close} the {target}{scale.sign} aimed at, with "
+    return (f"{low} to {high}{scale.sign}: the price is the middle; how several assets are watched together is known "
+            f"between bounds only, {width}{scale.sign} apart, {close} the {target}{scale.sign} aimed at, with "
             f"{bracket.steps} steps instead of {bracket.unrefined} ({bracket.cost:.1f} times the cost of a path)")
 
 

@@ -33,8 +33,8 @@ HOW = {"average": "the average of {}", "total": "the sum of {}", "product": "the
        "lowest": "the lowest {}", "highest": "the highest {}", "latest": "the latest {}",
        "ever": "whether ever {}", "always": "whether always {}"}
 LAWS = {"exact": "the level between two dates is a Brownian bridge in its log, whose extremes have a known law",
-        "bracketed": "of each asset the law of a bridge between two dates is known, of several together only bounds; the "
-                     "price is the middle of the two, and how far they are apart stands beside it",
+        "bracketed": "of each asset the law of a bridge between two dates is known, of several together only bounds; "
+                     "the price is the middle of the two, and how far they are apart stands beside it",
         "unread": "nothing depends on it"}
 ENTERS = {False: "payments weigh the chance that it is reached", True: "drawn on each path"}
 

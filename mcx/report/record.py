@@ -25,7 +25,8 @@ PACKAGES = ("mcx", "numpy", "numba", "llvmlite", "scipy", "pyyaml", "holidays", 
 CHECKSUM = "sha256"
 CLOSE = 1e-12  # relative, on another type of processor
 # How long it took, how the number of paths was found, and what is worded: sentences change with versions.
-NOT_COMPARED = ("seconds", "planned", "target", "reached", "warnings", "assumptions", "limits", "cautions", "calendar_version")
+NOT_COMPARED = ("seconds", "planned", "target", "reached", "warnings", "assumptions", "limits", "cautions",
+                "calendar_version")
 
 
 def environment() -> dict[str, str]:

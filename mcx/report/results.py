@@ -126,8 +126,8 @@ class Bracket(Result):
     lower, upper  bounds of the price, on the same paths; `width` is their distance, with its sampling error
     target        how close they should be: the 95 % half-width that was asked for, or that of the paths asked for
     reached       whether the pilot run found them so close
-    pieces        into how many parts at least the time that is watched was cut; `steps` and `unrefined` are the steps of
-                  the simulation with and without that, `cost` the cost of a path over one without
+    pieces        into how many parts at least the time that is watched was cut; `steps` and `unrefined` are the steps
+                  of the simulation with and without that, `cost` the cost of a path over one without
     others        the widths of legs, parts and probabilities
     """
 

@@ -97,9 +97,9 @@ def bridge_moment(d0: Value, d1: Value, half_square: Value, u: Value) -> Value:
     distances from the level, on whichever side, `half_square` is half the variance of the step times the square of a
     normal, u a uniform.
 
-    With T the step and t the moment, t / (T - t) is inverse Gaussian (in the clock of variance) with the mean d0 / d1 and
-    the shape d0^2 / variance. Of the two roots that such a normal has, `ratio` is the larger over the mean, and u chooses
-    (Michael, Schucany and Haas, "Generating random variates using transformations with multiple roots", 1976).
+    With T the step and t the moment, t / (T - t) is inverse Gaussian (in the clock of variance) with the mean d0 / d1
+    and the shape d0^2 / variance. Of the two roots that such a normal has, `ratio` is the larger over the mean, and u
+    chooses (Michael, Schucany and Haas, "Generating random variates using transformations with multiple roots", 1976).
     """
     d0, d1 = np.maximum(np.abs(d0), CLOSEST), np.maximum(np.abs(d1), CLOSEST)
     half = half_square / (d0 * d1)

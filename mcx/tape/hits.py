@@ -26,10 +26,10 @@ from mcx.tape.thresholds import Thresholds
 
 YEAR = 365.0  # days, as times are counted
 ROUNDING = 1e-6  # days
-ONE_LEVEL = ("the moment of a hit is known for one level of one asset; '{}' waits for several: give each a running value "
-             "and an event of its own")
-WHICH_FIRST = ("it ends the contract, and so may a hit of '{}' be first in the same stretch of time: which of the two comes "
-               "first is not known; watch one of them on dates")
+ONE_LEVEL = ("the moment of a hit is known for one level of one asset; '{}' waits for several: give each a running "
+             "value and an event of its own")
+WHICH_FIRST = ("it ends the contract, and so may a hit of '{}' be first in the same stretch of time: which of the two "
+               "comes first is not known; watch one of them on dates")
 
 
 @dataclass(frozen=True, slots=True)
@@ -126,12 +126,13 @@ class Hits:
             spots = [self.builder.input(Op.LEVEL, LevelKey(asset, stretch.end)) for asset in assets]
             return Scene(lambda _: tuple(spots), _no_running, moment=self._years(stretch, None))
         asset, level = self._barrier(stretch, flag)
-        part = self.builder.keyed(Op.MOMENT, (level,), LevelKey(asset, stretch.end, stretch.start), stretch.hit.event.place)
+        key = LevelKey(asset, stretch.end, stretch.start)
+        part = self.builder.keyed(Op.MOMENT, (level,), key, stretch.hit.event.place)
 
         def spot(name: Name) -> Values:
             if len(assets) > 1:
-                raise Unreadable(name.place, "at the moment of a hit only the level of the watched asset is known; write "
-                                             f"'of(spot, {self.dated.contract.assets[asset]})'")
+                raise Unreadable(name.place, "at the moment of a hit only the level of the watched asset is known; "
+                                             f"write 'of(spot, {self.dated.contract.assets[asset]})'")
             return (level,)
 
         return Scene(spot, _no_running, moment=self._years(stretch, part), known={asset: level}, part=part)

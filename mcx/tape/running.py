@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from mcx.checked.formula import Name
 from mcx.checked.payoff import Running
 from mcx.dates.dated_contract import Watch
-from mcx.tape.formulas import Formulas, Scene, Unreadable, Values
+from mcx.tape.formulas import Formulas, Unreadable, Values
 from mcx.tape.ops import Op
 from mcx.tape.program import Barrier, LevelKey
 from mcx.tape.watching import HIGHEST, Extremes

@@ -145,7 +145,7 @@ class _Walk:
             for row, asset in enumerate(self.assets):
                 self._move(row, asset)
             drawn: dict[tuple[Op, int], int] = {}
-            for op, key in sorted(self.covering[self.reached], key=lambda one: one[0]):  # each minimum before its maximum
+            for op, key in sorted(self.covering[self.reached], key=lambda one: one[0]):  # minima before maxima
                 if (op, key.asset) not in drawn:
                     drawn[op, key.asset] = self._bridge(op, key.asset, drawn.get((Op.LOW, key.asset)))
                 self._join(op, key, drawn[op, key.asset])

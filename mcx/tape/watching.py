@@ -19,12 +19,12 @@ from mcx.tape.ops import Op
 from mcx.tape.program import Barrier, Tape
 from mcx.tape.rules import evaluate
 
-BOTH_SIDES = ("watched from both sides at once: only joined by 'or' under 'ever', by 'and' under 'always' does each side "
-              "have its own extreme")
-SEVERAL_ASSETS = ("several assets watched at once: the highest of what they are together at one moment is no formula of "
-                  "their own extremes; the worst or best of them, 'any' and 'all' may be")
-JOINTLY_DRAWN = ("several assets watched at once, and their extremes decide more than what is paid (they are compared with "
-                 "something that is not fixed, or a formula that is no sum of payments): their joint law is not known; "
+BOTH_SIDES = ("watched from both sides at once: only joined by 'or' under 'ever', by 'and' under 'always' does each "
+              "side have its own extreme")
+SEVERAL_ASSETS = ("several assets watched at once: the highest of what they are together at one moment is no formula "
+                  "of their own extremes; the worst or best of them, 'any' and 'all' may be")
+JOINTLY_DRAWN = ("several assets watched at once, and their extremes decide more than what is paid (they are compared "
+                 "with something that is not fixed, or a formula that is no sum of payments): their joint law is not known; "
                  "watch them on dates")
 HIGHEST = {"highest": True, "ever": True, "lowest": False, "always": False}
 RISING = {"exp": Op.EXP, "log": Op.LOG, "sqrt": Op.SQRT}
@@ -51,7 +51,7 @@ class Extremes:
         self.shapes = _Shapes(formulas)
 
     def read(self, formula: Formula, highest: bool) -> Values:
-        """The values of a formula at their highest, or lowest; raises Unreadable where that is no formula of extremes."""
+        """The values of a formula at their highest, or lowest; raises Unreadable where extremes do not say it."""
         if not self.shapes.moves(formula):
             return self.formulas.read(formula, Scene(spot=_not_fixed, running=_not_fixed))
         try:
