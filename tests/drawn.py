@@ -45,7 +45,7 @@ def reference_results(ready: Ready, numbers: Sequence[int], seed: int) -> list[R
         def uniform(step: int, asset: int, side: str) -> float:
             return uniforms[dimensions[step, asset, side]] if (step, asset, side) in dimensions else np.nan
 
-        spare = set(range(len(uniforms))) - set(dimensions.values())  # the moments of hits take one, and the last normal
+        spare = set(range(len(uniforms))) - set(dimensions.values())  # a hit's moment takes one, and the last normal
         return reference.path(normal, uniform, (normals[-1], uniforms[spare.pop()]) if spare else (np.nan, np.nan))
 
     return [one(row) for row in drawn]

@@ -128,8 +128,8 @@ def bridge_high(x0: float, x1: float, variance: float, uniform: float) -> float:
 
 
 def moment_of_hit(d0: float, d1: float, variance: float, normal: float, uniform: float) -> float:
-    """Which part of a step has passed when a bridge with ends d0 and d1 away from a level reaches it first, given that it
-    does: s = t / (1 - t) is inverse Gaussian with the mean d0 / d1 and the shape d0^2 / variance. A draw of it solves
+    """Which part of a step has passed when a bridge with ends d0 and d1 away from a level reaches it first, given that
+    it does: s = t / (1 - t) is inverse Gaussian with the mean d0 / d1 and the shape d0^2 / variance. A draw of it solves
     (s - mean)^2 shape / (mean^2 s) = normal^2 by one of its two roots (Michael, Schucany & Haas 1976)."""
     mean, shape = d0 / d1, d0 * d0 / variance
     doubled = 2.0 + normal * normal * mean / shape  # the roots over the mean multiply to 1 and add up to this

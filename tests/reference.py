@@ -331,7 +331,7 @@ class Reference:
             after[asset] += drift + sum(weight * normal(step, k) for k, weight in enumerate(row) if weight)
         low, high = list(after), list(after)
         watched = self.watched_in(step)
-        for asset, side in sorted(watched, key=lambda one: (one[0], one[1] == "high")):  # the minimum before the maximum
+        for asset, side in sorted(watched, key=lambda one: (one[0], one[1] == "high")):  # minima first
             ends, drawn = (before[asset], after[asset], variances[asset]), uniform(step, asset, side)
             if side == "low":
                 low[asset] = bridge_low(*ends, drawn)

@@ -56,7 +56,8 @@ KNOWN = {
         "touch", "kind: no touch; direction: up; barrier: 110; cash: 1; watched: {continuous: [0y, 1y]}",
         forms.touch_at_expiry("up", "out", "cash", 110.0, 1.0, **FLAT)),
     "double no touch": Known(
-        "double_touch", "kind: no touch; lower_barrier: 80; upper_barrier: 125; cash: 1; watched: {continuous: [0y, 1y]}",
+        "double_touch", "kind: no touch; lower_barrier: 80; upper_barrier: 125; cash: 1; "
+                        "watched: {continuous: [0y, 1y]}",
         exp(-0.04) * forms.double_no_touch(80.0, 125.0, **FLAT)),
     "rebate at the hit": Known(
         "barrier", "side: call; direction: down; knock: out; strike: 1000; barrier: 85; rebate_at_hit: 3; "

@@ -116,7 +116,8 @@ def test_drawn_minimum_and_maximum_against_a_fine_grid():
 @pytest.mark.parametrize(("lower", "upper"), [(85.0, 120.0), (95.0, 104.0), (99.9, 150.0), (60.0, 170.0)])
 def test_double_no_touch(lower: float, upper: float):
     """Near and far barriers, one all but at the spot: the probability by quadrature."""
-    text = document("double_touch", kind="no touch", lower_barrier=lower, upper_barrier=upper, cash=1, watched=ALWAYS, expiry="1y")
+    text = document("double_touch", kind="no touch", lower_barrier=lower, upper_barrier=upper, cash=1, watched=ALWAYS,
+                    expiry="1y")
     truth = exp(-0.04) * double_no_touch(lower, upper, **FLAT)
     check(price_of(text + MARKET, 2**21, SEED), truth, sharp=2e-2)
 
@@ -156,10 +157,11 @@ def test_weighing_and_drawing_agree_and_weighing_is_surer(name: str, number: int
 
 
 def test_barriers_at_and_beyond_special_levels():
-    """A barrier at the spot is touched at once; crossed barriers leave no room; a barrier at the strike is a barrier."""
+    """A barrier at the spot is touched at once; crossed barriers leave no room; at the strike it is as any other."""
     def untouched(lower: float, upper: float) -> float:
-        return price_of(document("double_touch", kind="no touch", lower_barrier=lower, upper_barrier=upper, cash=1, watched=ALWAYS,
-                                 expiry="1y") + MARKET, 4096, SEED).mean
+        text = document("double_touch", kind="no touch", lower_barrier=lower, upper_barrier=upper, cash=1,
+                        watched=ALWAYS, expiry="1y")
+        return price_of(text + MARKET, 4096, SEED).mean
 
     assert untouched(100, 130) == untouched(80, 100) == untouched(120, 90) == untouched(100, 100) == 0.0
     assert untouched(1e-9, 1e9) == pytest.approx(exp(-0.04), rel=1e-14)
@@ -205,8 +207,8 @@ def test_moments_follow_the_law_of_first_passage(barrier: float, dates: int):
 
 
 def test_a_hit_is_paid_from_its_calendar_day():
-    """Between two dates the day of the hit decides what falls due and when: over all days the chance of the first passage
-    in each, times the discount factor two business days later."""
+    """Between two dates the day of the hit decides what falls due and when: over all days the chance of the first
+    passage in each, times the discount factor two business days later."""
     text = """contract: paid by the day
 currency: EUR
 units: 1
@@ -259,7 +261,7 @@ def bounds(rho: str, pieces: int, paths: int, count: int = 4) -> tuple[np.ndarra
 
 
 def test_independent_assets_lie_between_the_bounds():
-    """With no correlation the chance is the product of two closed forms; the bounds hold it and close as steps are cut."""
+    """Without correlation the chance is the product of two closed forms; bounds hold it and close with the steps."""
     truth = exp(-0.04) * (1.0 - hit_by("down", 85.0, **FLAT)) ** 2
     widths = []
     for pieces in (1, 16, 64):
@@ -344,12 +346,12 @@ events:
                         "read; 'count' is a running value"),
     ("WHAT", "1 + nth", "15:14: at the moment of a hit only terms, 'years' and the level of the watched asset can be "
                         "read; 'nth' belongs to a date"),
-    ("WHAT", "weekly", "15:10: at the moment of a hit only terms, 'years' and the level of the watched asset can be read; "
-                       "'weekly' has one value for each date of 'dates'"),
-    ("WHAT", "previous(spot, 1)", "15:10: at the moment of a hit only terms, 'years' and the level of the watched asset "
-                                  "can be read; 'previous' belongs to a date"),
-    ("WHAT", "1\n    due: later", "15:5: 'later' has a date for each date of a schedule, and the moment of a hit is none "
-                                  "of them; expected a 'date' term or 'same day'"),
+    ("WHAT", "weekly", "15:10: at the moment of a hit only terms, 'years' and the level of the watched asset can be "
+                       "read; 'weekly' has one value for each date of 'dates'"),
+    ("WHAT", "previous(spot, 1)", "15:10: at the moment of a hit only terms, 'years' and the level of the watched "
+                                  "asset can be read; 'previous' belongs to a date"),
+    ("WHAT", "1\n    due: later", "15:5: 'later' has a date for each date of a schedule, and the moment of a hit is "
+                                  "none of them; expected a 'date' term or 'same day'"),
 ])
 def test_what_may_be_read_at_a_hit_is_checked_with_the_definition(old: str, new: str, fault: str):
     """Each wrong word is a fault at its place, before any contract uses the definition."""

@@ -24,8 +24,8 @@ BOTH_SIDES = ("watched from both sides at once: only joined by 'or' under 'ever'
 SEVERAL_ASSETS = ("several assets watched at once: the highest of what they are together at one moment is no formula "
                   "of their own extremes; the worst or best of them, 'any' and 'all' may be")
 JOINTLY_DRAWN = ("several assets watched at once, and their extremes decide more than what is paid (they are compared "
-                 "with something that is not fixed, or a formula that is no sum of payments): their joint law is not known; "
-                 "watch them on dates")
+                 "with something that is not fixed, or a formula that is no sum of payments): their joint law is not "
+                 "known; watch them on dates")
 HIGHEST = {"highest": True, "ever": True, "lowest": False, "always": False}
 RISING = {"exp": Op.EXP, "log": Op.LOG, "sqrt": Op.SQRT}
 JOINS = {"best": (Op.MAX, True), "worst": (Op.MIN, False), "any": (Op.OR, True), "all": (Op.AND, False),

@@ -85,7 +85,8 @@ def barrier_rebate_at_hit(c: dict) -> Terms:
 
 def double_knock_out(c: dict) -> Terms:
     stated = {"side": c["kind"], "knock": "out", "strike": c["strike"]}
-    return "double_barrier", stated | {"lower_barrier": c["lower"], "upper_barrier": c["upper"]} | {"watched": always_watched(c)}
+    between = {"lower_barrier": c["lower"], "upper_barrier": c["upper"], "watched": always_watched(c)}
+    return "double_barrier", stated | between
 
 
 def cash_at_hit(c: dict) -> Terms:
