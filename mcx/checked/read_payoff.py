@@ -9,6 +9,7 @@ from __future__ import annotations
 import re
 from dataclasses import dataclass, replace
 
+from mcx.checked.at_the_hit import hit_faults
 from mcx.checked.formula import Formula
 from mcx.checked.kinds import Kind
 from mcx.checked.names import Names, in_order
@@ -50,6 +51,9 @@ def read_payoff(
     if faults or reader.faults or found is None or name is None:
         return None, faults + reader.faults
     lets, running, events = found
+    faults = hit_faults(terms, lets, running, events)
+    if faults:
+        return None, faults
     place = body.get("payoff").place
     return Payoff(name, about, terms, lets, running, events, place, (fewest, most), pays), []
 

@@ -7,7 +7,11 @@ levels held. A payment is multiplied only by scores of steps up to the last that
 zero given all that it depends on. Scores have mean zero too, so their means are controls, with coefficients from a pilot.
 
 Second derivatives by the spots: of the pathwise part the likelihood ratio of its delta, of the other part the second-order
-score.
+score. What reads the spot openly beside the levels, as the chance that a barrier is not reached in the first step does,
+adds its own derivatives with the levels held.
+
+The moments of hits share their draws, so that only the law of each by itself is known. Their scores multiply what is paid
+at that moment, less the same at another moment that is given: the score's mean is zero given the levels.
 """
 
 from __future__ import annotations
@@ -27,12 +31,12 @@ from mcx.leaves.grouped import Grouped, grouped
 from mcx.leaves.jacobian import inputs, jacobian
 from mcx.leaves.market_map import MarketMap
 from mcx.machine.sizes import cost
-from mcx.tape.adjoint import Gradient, finished, leaf_sums, of_the_market, on_paths, sums_of, sweep
+from mcx.tape.adjoint import Gradient, along, finished, leaf_sums, of_the_market, sums_of, sweep
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
 from mcx.tape.program import Leaf, LeafKind, Program, Sum, Tape, spot_leaf
-from mcx.tape.registers import lower, uniform_values
-from mcx.tape.scores import BRIDGES, Scores, latest_steps, scores
+from mcx.tape.registers import lower
+from mcx.tape.scores import DRAWN, Scores, latest_steps, moment_scores, scores
 from mcx.tape.steps import Grid
 
 
@@ -89,9 +93,9 @@ def pairs_of(assets: int) -> list[tuple[int, int]]:
 class Differentiator:
     """A tape with the sums that give all derivatives. `derived` and `controls` say which sums are derivatives by leaves
     and which are their controls; `deltas` and `curved` are, for each pair of spots, the sums that its second derivative
-    is made of, each with its control after it, empty where there is none. `tied` are by asset the
+    is made of, each with its control after it (of `curved` one, and then what is read openly), empty where there is none. `tied` are by asset the
     sums of both estimates of the pathwise part's delta, whose difference is a control. The last sum is the price. `rough`: the
-    second-order score that they need has no finite variance."""
+    second-order score that they need has no finite variance; `timed`: they need that of a hit's moment."""
 
     tape: Tape
     contract: Contract
@@ -102,6 +106,7 @@ class Differentiator:
     curved: tuple[tuple[int, ...], ...]
     tied: dict[int, tuple[int, ...]]
     rough: bool
+    timed: bool
 
     @staticmethod
     def of(tape: Tape, grid: Grid, contract: Contract, known: Sequence[float | None], *, pathwise: Iterable[int],
@@ -114,9 +119,9 @@ class Differentiator:
         later = _later(builder, tape, grid, likelihood)
         law = scores(builder, tape, grid, known, max(later, default=min(1, len(grid.times) - 1)))
         running = _running(builder, tape, grid, likelihood, later)
+        moments = _at_moments(builder, tape, likelihood)
         if likelihood:
-            held = {number for number, step in enumerate(tape.instructions) if step.op in (Op.STEP, *BRIDGES)}
-            derived += sums_of(sweep(builder, _counted(builder, likelihood), of_the_market, held))
+            derived += sums_of(sweep(builder, _counted(builder, likelihood), of_the_market, _drawn(tape)))
             for score in law.first:
                 if score.step in later:
                     leaf = builder.leaf(score.leaf)
@@ -126,7 +131,13 @@ class Differentiator:
                 leaf = builder.leaf(spot_leaf(tape.leaves, edge.asset))
                 derived.append(Sum(replaced(builder, later[1], edge.extreme, edge.start), edge.weight, leaf))
                 controls.append(Sum(edge.weight, None, leaf))
+            for moment, paid in moments.items():
+                for score in moment_scores(builder, tape, moment):
+                    leaf = builder.leaf(score.leaf)
+                    derived.append(Sum(paid, score.value, leaf))
+                    controls.append(Sum(score.value, None, leaf))
         deltas, curved, extra = [], [], []
+        opened = _Opened(builder, tape)
         tied: dict[int, tuple[int, ...]] = {}
         slopes = _by_log_spots(builder, tape, smooth, law.spots) if smooth and second else {}
         total = builder.fold(Op.ADD, pathwise) if pathwise else builder.constant(0.0)
@@ -140,21 +151,22 @@ class Differentiator:
             crossed, score = (), ()
             if all(asset in law.spots for asset in pair):
                 if smooth:
-                    both = [_crossed(builder, slopes[one], other, law)
+                    both = [_crossed(builder, slopes[one], other, law, opened)
                             for one, other in (pair, pair[::-1])]
                     crossed = noted(*both[0], *both[1])
                     if pair[0] == pair[1] and pair[0] not in tied:
-                        tied[pair[0]] = noted(*_crossed(builder, total, pair[0], law), Sum(slopes[pair[0]]))
+                        tied[pair[0]] = noted(*_crossed(builder, total, pair[0], law, opened),
+                                              Sum(slopes[pair[0]]))
                 if 1 in later:
                     bend = law.second[pair]
-                    score = noted(Sum(later[1], bend), Sum(bend))
+                    score = noted(Sum(later[1], bend), Sum(bend), *_bent(later[1], pair, law, opened))
             deltas.append(crossed)
             curved.append(score)
         noted(Sum(tape.outputs[0].value))
         made = finished(builder, tape, (*derived, *controls, *extra))
         return Differentiator(made, contract, grouped(made.leaves), range(len(derived)),
                               range(len(derived), len(derived) + len(controls)), tuple(deltas), tuple(curved), tied,
-                              bool(likelihood and law.edges))
+                              bool(likelihood and law.edges), bool(moments))
 
     def on(self, market: Market) -> Bound:
         """The tape on a market, ready to run."""
@@ -197,7 +209,8 @@ class Bound:
                     second[:, pair] += 0.5 * found[:, 0::2].sum(axis=1)
                     controls[:, pair, side] = found[:, 1::2].sum(axis=1)
             if self.of.curved[pair]:
-                second[:, pair] += sums[:, self.of.curved[pair][0]]
+                value, _, *openly = self.of.curved[pair]
+                second[:, pair] += sums[:, [value, *openly]].sum(axis=1)
                 controls[:, pair, 2] = sums[:, self.of.curved[pair][1]]
             if one == other:
                 second[:, pair] -= level[0] * first[:, spots[one]]
@@ -215,10 +228,64 @@ def _counted(builder: Builder, values: Iterable[int]) -> dict[int, int]:
     return {value: builder.constant(float(count)) for value, count in Counter(values).items()}
 
 
-def _crossed(builder: Builder, delta: int, asset: int, law: Scores) -> list[Sum]:
+def _drawn(tape: Tape) -> set[int]:
+    """What a likelihood ratio holds where it is."""
+    return {number for number, step in enumerate(tape.instructions) if step.op in (Op.STEP, *DRAWN)}
+
+
+class _Opened:
+    """Derivatives by log spots of values on each path, with all that is drawn held."""
+
+    def __init__(self, builder: Builder, tape: Tape):
+        self.builder, self.tape, self.held = builder, tape, _drawn(tape)
+        self.chances = any(step.op in (Op.BRIDGE_CLEAR, Op.BRIDGE_CORRIDOR) for step in tape.instructions)
+
+    def by(self, value: int, asset: int) -> int | None:
+        """A value of the tape; None where it is 0: nothing but chances reads a spot beside later levels."""
+        if not self.chances:
+            return None
+        spot = spot_leaf(self.tape.leaves, asset)
+        one = self.builder.constant(1.0)
+        gradient = sweep(self.builder, {value: one}, lambda leaf: leaf == spot, self.held)
+        found = along(self.builder, gradient, self.builder.leaf(spot))
+        return None if self.builder.number(found) == 0.0 else found
+
+
+def _bent(value: int, pair: tuple[int, int], law: Scores, opened: _Opened) -> list[Sum]:
+    """What a value that reads the spots openly adds to its second-order likelihood ratio."""
+    found = []
+    for one, other in (pair, pair[::-1]):
+        slope = opened.by(value, one)
+        if slope is not None:
+            found.append(Sum(slope, law.spots[other]))
+    first = opened.by(value, pair[0])
+    bend = None if first is None else opened.by(first, pair[1])
+    return found if bend is None else [*found, Sum(bend)]
+
+
+def _at_moments(builder: Builder, tape: Tape, payments: Iterable[int]) -> dict[int, int]:
+    """For each moment of a hit what is paid at it, less the same with the hit half way through the step."""
+    reads: list[frozenset[int]] = []
+    for number, step in enumerate(tape.instructions):
+        found = frozenset().union(*(reads[k] for k in step.operands))
+        reads.append(found | {number} if step.op is Op.BRIDGE_MOMENT else found)
+    paid: dict[int, int] = {}
+    half = builder.constant(0.5)
+    for payment, count in Counter(payments).items():
+        for moment in sorted(reads[payment]):
+            part = builder.emit(Op.SUB, payment, replaced(builder, payment, moment, half))
+            part = builder.emit(Op.MUL, part, builder.constant(float(count)))
+            paid[moment] = builder.emit(Op.ADD, paid[moment], part) if moment in paid else part
+    return paid
+
+
+def _crossed(builder: Builder, delta: int, asset: int, law: Scores, opened: _Opened) -> list[Sum]:
     """The likelihood ratio by an asset's log spot of a delta on each path: sums and their controls in turn."""
     move = law.spots[asset]
     found = [Sum(delta, move), Sum(move)]
+    openly = opened.by(delta, asset)
+    if openly is not None:
+        found += [Sum(openly), Sum(builder.constant(0.0))]
     for edge in law.edges:
         if edge.asset == asset:
             found += [Sum(replaced(builder, delta, edge.extreme, edge.start), edge.weight), Sum(edge.weight)]
@@ -236,17 +303,8 @@ def replaced(builder: Builder, value: int, old: int, new: int) -> int:
 
 
 def _by_log_spots(builder: Builder, tape: Tape, gradient: Gradient, assets: Iterable[int]) -> dict[int, int]:
-    """By asset the derivative by its log spot as a value on each path: paths read it alone, or with the first drift
-    added."""
-    spots = {asset: builder.leaf(spot_leaf(tape.leaves, asset)) for asset in assets}
-    read = {spot: [spot] for spot in spots.values()}
-    for number, step in enumerate(tape.instructions):
-        if step.op is Op.ADD:
-            for operand in step.operands:
-                if operand in read:
-                    read[operand].append(number)
-    return {asset: on_paths(builder, [part for value in read[spot] for part in gradient.get(value, ())])
-            for asset, spot in spots.items()}
+    """By asset the derivative by its log spot as a value on each path."""
+    return {asset: along(builder, gradient, builder.leaf(spot_leaf(tape.leaves, asset))) for asset in assets}
 
 
 def _later(builder: Builder, tape: Tape, grid: Grid, payments: Sequence[int]) -> dict[int, int]:

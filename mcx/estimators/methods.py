@@ -68,7 +68,7 @@ def methods(ready: Ready, market: Market, asked: str) -> Methods:
     jumping = [payment for payment in paid if found[payment]]
     smooth = [payment for payment in paid if not found[payment]]
     places = tuple({(jump.kind, jump.place): jump for payment in jumping for jump in found[payment]}.values())
-    still = without_own_randomness(dict(zip(tape.leaves, values, strict=True)), contract)
+    still = without_own_randomness(dict(zip(tape.leaves, values, strict=True)), contract) or joint_extremes(tape)
 
     def method(name: str, pathwise: list[int], likelihood: list[int]) -> Method:
         engine = Differentiator.of(tape, unrolled.grid, contract, known, pathwise=pathwise, likelihood=likelihood,
@@ -116,6 +116,15 @@ def without_own_randomness(values: dict[Leaf, float], contract: Contract) -> str
     return ""
 
 
+def joint_extremes(tape: Tape) -> str:
+    """Why there is no score: an asset's lowest and highest level are drawn together; '' where none are."""
+    place = next((step.place for step in tape.instructions if step.op is Op.BRIDGE_RANGE), None)
+    if any(step.op is Op.BRIDGE_RANGE for step in tape.instructions):
+        return (f"the lowest and the highest level of one asset are drawn together{f' at {place}' if place else ''}, and "
+                f"the score of their joint law is not taken")
+    return ""
+
+
 def read_today(tape: Tape, known: Sequence[float | None]) -> str:
     """Why a likelihood ratio by a spot would miss something: today's level is compared with one that is drawn, and moves
     while that is held; '' where it is not."""
@@ -144,6 +153,8 @@ def dividends_compared(tape: Tape, known: Sequence[float | None]) -> str:
 
 def second_order_trouble(tape: Tape, engine: Differentiator) -> str:
     """Why there is no gamma; '' where there is one."""
+    if engine.timed:
+        return "an amount is paid at the moment of a hit, of whose law the second-order score is not taken"
     if any(map(_is_today, tape.instructions)):
         return "the payoff reads today's level itself beside later ones; a second derivative through both is not taken"
     if engine.rough:

@@ -23,7 +23,7 @@ class Ledger:
     parts: dict[str, int] = field(default_factory=dict)
     conditions: dict[str, dict[Day, int]] = field(default_factory=dict)
     ends: dict[Day, int] = field(default_factory=dict)
-    lives: list[tuple[int, float]] = field(default_factory=list)  # flag of the ending, time of its payment
+    lives: list[tuple[int, int]] = field(default_factory=list)  # flag of the ending, time of its payment
     last_payment: float = 0.0
 
     @staticmethod
@@ -38,18 +38,19 @@ class Ledger:
         ledger.conditions = {event.name: {} for event in payoff.events if event.name}
         return ledger
 
-    def pay(self, pay: Pay, present_value: int, due: Day) -> None:
+    def pay(self, pay: Pay, present_value: int, latest: float) -> None:
+        """An amount, and the latest time at which it may be paid."""
         add = self.builder.emit
         self.legs[pay.leg] = add(Op.ADD, self.legs[pay.leg], present_value, place=pay.place)
         if self.parts:
             part = pay.part or UNSORTED
             self.parts[part] = add(Op.ADD, self.parts[part], present_value, place=pay.place)
-        self.last_payment = max(self.last_payment, due.time)
+        self.last_payment = max(self.last_payment, latest)
 
     def happened(self, name: str, day: Day, flag: int) -> None:
         self._join(self.conditions[name], day, flag)
 
-    def ended(self, day: Day, flag: int, payment: float) -> None:
+    def ended(self, day: Day, flag: int, payment: int) -> None:
         """The contract ended on `day` where `flag`; `payment` is when the amount due for it is paid."""
         self._join(self.ends, day, flag)
         self.lives.append((flag, payment))
@@ -83,7 +84,9 @@ class Ledger:
 
     def _life(self) -> int:
         """Years to the payment due for the ending, or to the last payment where the contract never ends early."""
-        life = self.builder.constant(self.last_payment)
-        for flag, payment in self.lives:
-            life = self.builder.emit(Op.SELECT, flag, self.builder.constant(payment), life)
+        emit, last = self.builder.emit, self.builder.constant(self.last_payment)
+        life = last
+        for flag, payment in self.lives:  # no two endings happen on one path
+            early = emit(Op.SELECT, flag, emit(Op.SUB, payment, last), self.builder.constant(0.0))
+            life = emit(Op.ADD, life, early)
         return life

@@ -7,10 +7,10 @@ from dataclasses import dataclass
 from mcx.checked.formula import Name
 from mcx.checked.payoff import Running
 from mcx.dates.dated_contract import Watch
-from mcx.tape.formulas import Formulas, Scene, Unreadable, Values
+from mcx.tape.formulas import Formulas, Unreadable, Values
 from mcx.tape.ops import Op
-from mcx.tape.program import LevelKey
-from mcx.tape.watching import Side, watched_side
+from mcx.tape.program import Barrier, LevelKey
+from mcx.tape.watching import HIGHEST, Extremes
 
 FOLDS = {
     "average": Op.ADD,
@@ -56,19 +56,24 @@ class Observed:
 
 
 @dataclass(slots=True)
-class Watched:
-    """A running value watched continuously: the extreme of one asset's level so far, and the formula of it.
+class Extreme:
+    """The lowest or highest level of an asset so far, until a time."""
 
-    The extreme is extended when somebody reads it, up to that day and never past the end of the watch, so that days
-    that nobody asks about cost nothing.
+    value: int
+    until: float
+
+
+class Watched:
+    """A running value watched continuously: the extremes that decide it so far, and the formula of them.
+
+    The extremes are extended when somebody reads the value, up to that day and never past the end of the watch, so
+    that days that nobody asks about cost nothing. `barriers` are the extremes that were asked for.
     """
 
-    watch: Watch
-    formulas: Formulas
-    start: Values | None
-    side: Side | None = None
-    extreme: int | None = None
-    until: float = 0.0
+    def __init__(self, watch: Watch, formulas: Formulas, start: Values | None):
+        self.watch, self.formulas, self.start = watch, formulas, start
+        self.barriers: dict[Barrier, None] = {}
+        self._extremes: dict[tuple[int, Op], Extreme] = {}
 
     def read(self, asker: Name, time: float) -> Values:
         running = self.watch.running
@@ -76,29 +81,31 @@ class Watched:
             if self.start is None:
                 raise Unreadable(asker.place, f"'{running.name}' is read before its first date")
             return self.start
-        if self.side is None:
-            self.side = watched_side(running, self.formulas)
-        self._extend(min(time, self.watch.end.time))
-        scene = Scene(spot=lambda _: (self.extreme,) * len(self.formulas.contract.assets), running=_unreadable)
-        values = self.formulas.read(running.formula, scene)
+        return self.at(time)
+
+    def at(self, time: float) -> Values:
+        """The value at a time from the start of the watch on."""
+        running, time = self.watch.running, min(time, self.watch.end.time)
+        extremes = Extremes(self.formulas, lambda asset, op: self._extended(asset, op, time))
+        values = extremes.read(running.formula, HIGHEST[running.how])
+        if not self._extremes:
+            raise Unreadable(running.place, "a continuous watch needs a formula of an asset's level")
         if self.start is not None:
             values = self.formulas.spread(FOLDS[running.how], self.start, values, place=running.place)
         return values
 
-    def _extend(self, time: float) -> None:
-        builder, place = self.formulas.builder, self.watch.running.place
-        if self.extreme is None:
-            self.until = self.watch.start.time
-            if time == self.until:  # on its first day: the level itself
-                self.extreme = builder.input(Op.LEVEL, LevelKey(self.side.asset, time), place)
-                return
-        elif time <= self.until:
-            return
-        piece = builder.input(self.side.level_op, LevelKey(self.side.asset, time, self.until), place)
-        op = Op.MIN if self.side.level_op is Op.LOW else Op.MAX
-        self.extreme = piece if self.extreme is None else builder.emit(op, self.extreme, piece, place=place)
-        self.until = time
-
-
-def _unreadable(name: Name) -> Values:
-    raise Unreadable(name.place, f"'{name.name}' is not fixed while it is watched continuously")
+    def _extended(self, asset: int, op: Op, time: float) -> int:
+        builder, place, start = self.formulas.builder, self.watch.running.place, self.watch.start.time
+        extreme = self._extremes.get((asset, op))
+        if time == start:  # on its first day: the level itself
+            value = builder.input(Op.LEVEL, LevelKey(asset, time), place)
+            self._extremes.setdefault((asset, op), Extreme(value, time))
+            return value
+        if extreme is None or time > extreme.until:
+            key = LevelKey(asset, time, extreme.until if extreme else start)
+            self.barriers[Barrier(op, key)] = None
+            piece = builder.input(op, key, place)
+            joined = Op.MIN if op is Op.LOW else Op.MAX
+            value = builder.emit(joined, extreme.value, piece, place=place) if extreme else piece
+            extreme = self._extremes[asset, op] = Extreme(value, time)
+        return extreme.value

@@ -56,7 +56,7 @@ def made(condition: str, amount: str) -> str:
 
 
 @pytest.mark.parametrize(("text", "place"), [
-    (DIGITAL, r"digital\.yaml:19:18 \(condition\)"), (BARRIER, r"barrier\.yaml:26:"), (AUTOCALL, r"autocall\.yaml:37:15")])
+    (DIGITAL, r"digital\.yaml:19:18 \(condition\)"), (BARRIER, r"barrier\.yaml:32:"), (AUTOCALL, r"autocall\.yaml:37:15")])
 def test_pathwise_is_refused_where_the_payoff_jumps(text: str, place: str):
     """With the line of the condition that makes it jump."""
     with pytest.raises(Refusal, match=f"no pathwise estimate, since the payoff jumps at .*{place}"):
