@@ -281,7 +281,9 @@ def replay(
         wishes = [wish_of(*(each[key] for key in keys)) for each in runs]
         results = _whole(_greeks(made, dated, wishes, asked, seeds, threads, progress, notice)).contracts
     else:
-        results = _whole(_price(made, dated, asked, seeds, threads, progress, notice)).prices
+        brackets = [each.get("bracket") for each in stored["results"]]
+        pieces = [bracket and bracket["pieces"] for bracket in brackets]
+        results = _whole(_price(made, dated, asked, seeds, threads, progress, notice, pieces)).prices
     return compare(stored, [each.to_dict() for each in results], environment())
 
 
@@ -367,23 +369,27 @@ def _price(
     threads: int | None,
     progress: Progress | None,
     notice: Callable[[str], None] | None,
+    pieces: Sequence[int | None] | None = None,
 ) -> PriceTable:
-    """Every contract valued; after an interruption those so far. Raises KeyboardInterrupt if that is none."""
+    """Every contract valued; after an interruption those so far. Raises KeyboardInterrupt if that is none. `pieces`
+    prescribe how fine the steps are where a price lies between bounds."""
     from mcx.estimators.finite import finite
     from mcx.estimators.price import value
     from mcx.report.results import PriceTable
     from mcx.report.summary import price_result
 
     results = []
-    for ready, wish, seed in zip(_ready(made, dated), asked, seeds, strict=True):
+    pieces = pieces or [None] * len(dated)
+    for ready, wish, seed, number in zip(_ready(made, dated), asked, seeds, pieces, strict=True):
         try:
             with finite(ready):
-                valuation = value(ready, wish, seed=seed, threads=threads, progress=progress, notice=notice)
+                valuation = value(ready, wish, seed=seed, threads=threads, pieces=number, progress=progress,
+                                  notice=notice)
         except KeyboardInterrupt:
             if not results:
                 raise
             break
-        results.append(price_result(ready, made.market, valuation))
+        results.append(price_result(valuation.ready, made.market, valuation))
         if valuation.interrupted:
             break
     return PriceTable(tuple(results), tuple(each.contract.title for each in dated[len(results):]))

@@ -242,3 +242,37 @@ def forward_start(kind: str, spot: float, strike_ratio: float, start: float, mat
     """Option whose strike is set at `start` to a multiple of the spot then (Rubinstein, Pay now, choose later, 1990)."""
     later = european(kind, 1.0, strike_ratio, maturity - start, rate, dividend_yield, vol)
     return spot * exp(-dividend_yield * start) * later
+
+
+def double_no_touch(lower: float, upper: float, spot: float, maturity: float, rate: float, dividend_yield: float,
+                    vol: float) -> float:
+    """The probability that neither barrier is touched, watched continuously: the density between two absorbing barriers
+    (images, Feller 1971, II, X.5; the drift by Girsanov's change of measure), by quadrature over the last level."""
+    deviation, width, start = vol * sqrt(maturity), log(upper / lower), log(spot / lower)
+    drift = (rate - dividend_yield) * maturity - deviation**2 / 2
+
+    def density(end: float) -> float:
+        images = sum(exp(-((end - start + 2 * n * width) ** 2) / (2 * deviation**2))
+                     - exp(-((end + start + 2 * n * width) ** 2) / (2 * deviation**2)) for n in range(-12, 13))
+        return images * exp((drift * (end - start) - drift**2 / 2) / deviation**2) / (deviation * sqrt(2 * np.pi))
+
+    return quad(density, 0.0, width, epsabs=1e-13, epsrel=1e-11, limit=400)[0] if lower < spot < upper else 0.0
+
+
+def hit_by(direction: str, barrier: float, spot: float, maturity: float, rate: float, dividend_yield: float,
+           vol: float) -> float:
+    """The probability that the barrier is touched by `maturity`, watched continuously. Reiner & Rubinstein (1991)."""
+    market = {"spot": spot, "maturity": maturity, "rate": rate, "dividend_yield": dividend_yield, "vol": vol}
+    return 1.0 - exp(rate * maturity) * float(untouched_slice(direction, barrier, 0.0, 1.0, 0.0, inf, **market))
+
+
+def cash_at_hit(direction: str, barrier: float, cash: float, spot: float, maturity: float, rate: float,
+                dividend_yield: float, vol: float) -> float:
+    """Cash paid at the first touch, if that comes by `maturity`. Reiner & Rubinstein (1991), Unscrambling the binary
+    code."""
+    sign = 1.0 if direction == "down" else -1.0
+    mu = (rate - dividend_yield - vol**2 / 2) / vol**2
+    bent = sqrt(mu**2 + 2 * rate / vol**2)
+    z = log(barrier / spot) / (vol * sqrt(maturity)) + bent * vol * sqrt(maturity)
+    near = (barrier / spot) ** (mu + bent) * ndtr(sign * z)
+    return cash * (near + (barrier / spot) ** (mu - bent) * ndtr(sign * (z - 2 * bent * vol * sqrt(maturity))))

@@ -15,7 +15,7 @@ from reference import Reference, Result
 from mcx.machine.run import draws
 from mcx.tape.ops import Op
 
-SIDES = {Op.BRIDGE_LOW: "low", Op.BRIDGE_HIGH: "high"}
+SIDES = {Op.BRIDGE_LOW: "low", Op.BRIDGE_HIGH: "high", Op.BRIDGE_RANGE: "high"}
 
 
 def uniform_dimensions(ready: Ready) -> dict[tuple[int, int, str], int]:
@@ -45,6 +45,7 @@ def reference_results(ready: Ready, numbers: Sequence[int], seed: int) -> list[R
         def uniform(step: int, asset: int, side: str) -> float:
             return uniforms[dimensions[step, asset, side]] if (step, asset, side) in dimensions else np.nan
 
-        return reference.path(normal, uniform)
+        spare = set(range(len(uniforms))) - set(dimensions.values())  # a hit's moment takes one, and the last normal
+        return reference.path(normal, uniform, (normals[-1], uniforms[spare.pop()]) if spare else (np.nan, np.nan))
 
     return [one(row) for row in drawn]

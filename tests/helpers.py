@@ -91,21 +91,21 @@ class Ready:
         return dict(zip(self.names, values, strict=True))
 
 
-def ready_of(request: Request, number: int = 0) -> Ready:
-    """One contract of a request, made ready."""
+def ready_of(request: Request, number: int = 0, everything_drawn: bool = False) -> Ready:
+    """One contract of a request, made ready; continuous flags as probabilities, or all drawn."""
     contract, market = request.contracts[number], request.market
     dated, faults = date_on(contract, market)
     assert dated is not None, "\n".join(map(str, faults))
     leaves = MarketMap.of(market, dated)
     assert not leaves.faults(), "\n".join(map(str, leaves.faults()))
-    unrolled = unroll(dated, nodes=leaves.nodes(), makeup=leaves.makeup())
+    unrolled = unroll(dated, nodes=leaves.nodes(), makeup=leaves.makeup(), everything_drawn=everything_drawn)
     assert not unrolled.faults, "\n".join(map(str, unrolled.faults))
     return Ready(dated, market, unrolled, lower(unrolled.tape, leaves.values(unrolled.tape.leaves)))
 
 
-def prepare(text: str) -> Ready:
+def prepare(text: str, everything_drawn: bool = False) -> Ready:
     """The only contract of a text, made ready."""
-    return ready_of(request_of(text))
+    return ready_of(request_of(text), everything_drawn=everything_drawn)
 
 
 def price_of(text: str, paths: int, seed: int) -> Estimate:

@@ -6,10 +6,13 @@ total variance interpolates linearly and goes on at the last vol. Nothing here i
 
 from __future__ import annotations
 
+import cmath
 import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from datetime import timedelta
+
+from scipy.optimize import brentq
 
 from mcx.checked.contract import Contract
 from mcx.checked.market import Curve, Market
@@ -253,3 +256,37 @@ def bridge_low(x0: float, x1: float, variance: float, uniform: float) -> float:
 def bridge_high(x0: float, x1: float, variance: float, uniform: float) -> float:
     """The maximum: the minimum of the bridge turned upside down."""
     return -bridge_low(-x0, -x1, variance, uniform)
+
+
+def moment_of_hit(d0: float, d1: float, variance: float, normal: float, uniform: float) -> float:
+    """Which part of a step has passed when a bridge with ends d0 and d1 away from a level reaches it first, given that
+    it does: s = t / (1 - t) is inverse Gaussian with the mean d0 / d1 and the shape d0^2 / variance. A draw of it solves
+    (s - mean)^2 shape / (mean^2 s) = normal^2 by one of its two roots (Michael, Schucany & Haas 1976)."""
+    mean, shape = d0 / d1, d0 * d0 / variance
+    doubled = 2.0 + normal * normal * mean / shape  # the roots over the mean multiply to 1 and add up to this
+    small = 2.0 / (doubled + math.sqrt(doubled * doubled - 4.0))
+    root = mean * (small if uniform <= 1.0 / (1.0 + small) else 1.0 / small)
+    return root / (1.0 + root)
+
+
+def within(x0: complex, x1: complex, low: complex, high: complex, variance: float) -> complex:
+    """The probability that a bridge stays between two barriers: its images in both of them (Feller 1971, II, X.5)."""
+    total, width = 0.0, high - low
+    for n in range(-12, 13):
+        total += cmath.exp(((x1 - x0) ** 2 - (x1 - x0 + 2 * n * width) ** 2) / (2 * variance))
+        total -= cmath.exp(((x1 - x0) ** 2 - (x1 + x0 - 2 * low + 2 * n * width) ** 2) / (2 * variance))
+    return total
+
+
+def bridge_high_given_low(x0: float, x1: float, variance: float, low: float, uniform: float) -> float:
+    """The maximum of a bridge whose minimum is known: the derivative of `within` by the lower barrier, taken along the
+    imaginary axis (Squire & Trapp 1998), over that without an upper barrier, set equal to the uniform."""
+    if variance == 0.0:
+        return max(x0, x1)
+    density = 2.0 * (x0 + x1 - 2.0 * low) / variance * math.exp(-2.0 * (x0 - low) * (x1 - low) / variance)
+
+    def miss(high: float) -> float:
+        return -within(x0, x1, low + 1e-30j, high, variance).imag / 1e-30 / density - uniform
+
+    least = max(x0, x1, low + 0.35 * math.sqrt(variance))
+    return brentq(miss, least, least + 9.0 * math.sqrt(variance), xtol=1e-14) if miss(least) < 0.0 else least

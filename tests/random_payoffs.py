@@ -68,7 +68,7 @@ class Kinds:
             case "function":
                 return self.pick(f"min({x()}, {x()})", f"max({x()}, {x()})", f"abs({x()})", f"exp(min({x()}, 1.3))",
                                  f"log(abs({x()}) + 0.7)", f"sqrt(abs({x()}))", f"clip({x()}, -0.5, 1.5)",
-                                 f"({x()} / (abs({x()}) + 0.6))", f"(abs({x()}) + 0.1) ** 0.5")
+                                 f"({x()} / (abs({x()}) + 0.6))", f"((abs({x()}) + 0.1) ** 0.5)")
             case "if":
                 return f"({x()} if {self.flag(depth - 1)} else {x()})"
             case "previous" if self.previous:

@@ -13,13 +13,13 @@ import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 
-from plain_market import PlainMarket, bridge_high, bridge_low
+from plain_market import PlainMarket, bridge_high, bridge_high_given_low, bridge_low, moment_of_hit
 
 from mcx.checked import formula as trees
 from mcx.checked.contract import Figures, LevelFixing, Word
 from mcx.checked.market import Market
 from mcx.checked.payoff import Assign, Deliver, End, Event, Pay, Running
-from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Moment, Occasion, Update, Watch
+from mcx.dates.dated_contract import DatedContract, DatedEvent, DatedHit, Day, Moment, Occasion, Update, Watch
 from mcx.faults import Place
 
 Value = float | bool | tuple  # a number, a flag, or one of them for each asset
@@ -307,7 +307,8 @@ class Reference:
         """Which extremes of which assets a continuous watch needs, found by trying levels in its formula.
 
         An extreme of a number needs the assets that the number depends on. A flag is needed from the side on which,
-        one asset moved alone from one far end to the other, it becomes what it waits for.
+        one asset moved alone from one far end to the other, or from the spots to one of them, it becomes what it waits
+        for.
         """
         walk, count, found = Walk(self.dated, self.market), len(self.spots), set()
 
@@ -316,9 +317,10 @@ class Reference:
             return walk.evaluate(running.formula)
 
         for asset in range(count):
-            for side, calm, far in (("low", HUGE, TINY), ("high", TINY, HUGE)):
-                before = value([calm] * count)
-                after = value([far if k == asset else calm for k in range(count)])
+            for side, far, calm in (("low", TINY, [HUGE] * count), ("high", HUGE, [TINY] * count),
+                                    ("low", TINY, self.spots), ("high", HUGE, self.spots)):
+                before = value(list(calm))
+                after = value([far if k == asset else level for k, level in enumerate(calm)])
                 if running.how in ("lowest", "highest"):
                     wanted = before != after and side == {"lowest": "low", "highest": "high"}[running.how]
                 else:
@@ -327,15 +329,21 @@ class Reference:
                     found.add((asset, side))
         return found
 
-    def path(self, normal: Callable[[int, int], float], uniform: Callable[[int, int, str], float]) -> Result:
+    def path(self, normal: Callable[[int, int], float], uniform: Callable[[int, int, str], float],
+             pair: tuple[float, float] = (math.nan, math.nan)) -> Result:
         """What the contract pays on one path.
 
         `normal(step, k)` is the normal of the k-th moving asset in a step, `uniform(step, asset, side)` the uniform of
-        a watched extreme inside it, side 'low' or 'high'.
+        a watched extreme inside it, side 'low' or 'high'; `pair` a normal and a uniform for the moment of a hit.
         """
+        self.pair = pair
         walk, levels, logs = Walk(self.dated, self.market), self.spots, dict(self.starts)
         walk.result.life = max((day.time for moment in self.dated.moments for event in moment.events
                                 for day in event.due.values()), default=0.0)
+        for hit in self.dated.hits:
+            pays = [one for one in (*hit.event.then, *hit.event.otherwise) if isinstance(one, Pay)]
+            latest = [hit.due[pay][-1].time if pay in hit.due else hit.watch.end.time for pay in pays]
+            walk.result.life = max([walk.result.life, *latest])
         starts = {self.snap(watch.start.time) for watch in self.dated.watches}
         ended, today = False, self.spots
         fixed = {self.snap(day.time): day for days in self.dated.schedules.values() for day in days if day.time <= 0.0}
@@ -343,12 +351,13 @@ class Reference:
             if time <= 0.0:
                 levels = self.fixings(fixed[time]) if time in fixed else today
             low = high = None
+            before = levels
             if time in self.grid:
                 step = self.grid.index(time)
                 levels, low, high = self.advance(step, levels if step else today, logs, normal, uniform)
             known = time <= 0.0 or time in self.grid
             walk.levels[time] = levels
-            ended = ended or self.live(walk, time, plain(levels) if known else None, low, high)
+            ended = ended or self.live(walk, time, plain(levels) if known else None, low, high, (before, levels))
             walk.deliver(time, levels)
             if ended and not any(due > time + SAME_TIME for _, due, *_ in walk.deliveries):
                 break
@@ -374,23 +383,43 @@ class Reference:
                 after[asset] = math.exp(logs[asset]) + (self.market.escrow(asset, time) if self.escrows[asset] else 0.0)
                 after[asset] *= 1.0 if self.rates[asset] is None else math.exp(logs[self.rates[asset]])
         low, high = list(after), list(after)
-        for asset, side in sorted(self.watched_in(step)):
-            found = self.extreme(step, asset, side, before, logs, uniform(step, asset, side))
+        watched, drawn = self.watched_in(step), {}
+        for asset, side in sorted(watched, key=lambda one: (one[0], one[1] == "high")):  # minima first
+            drawn[asset, side] = self.bridge(step, asset, side, before, logs, uniform(step, asset, side),
+                                             drawn.get((asset, "low")))
+            found = self.extreme(step, asset, drawn[asset, side])
             if side == "low":
                 low[asset] = min(found, levels[asset], after[asset])
             else:
                 high[asset] = max(found, levels[asset], after[asset])
         return tuple(after), plain(low), plain(high)
 
-    def extreme(self, step: int, asset: int, side: str, before: dict[int, float], after: dict[int, float],
-                uniform: float) -> float:
-        """The lowest or highest level inside a step, until just before a dividend at its end."""
+    def bridge(self, step: int, asset: int, side: str, before: dict[int, float], after: dict[int, float],
+               uniform: float, lowest: float | None) -> float:
+        """The lowest or highest log inside a step, until just before a dividend at its end; `lowest` where it is
+        known."""
+        rows, variance = self.rows(asset), self.variance(step, asset)
+        jump = self.market.jump(asset, self.grid[step])
+        ends = sum(before[row] for row in rows), sum(after[row] for row in rows) - jump
+        if side == "low":
+            return bridge_low(*ends, variance, uniform)
+        if lowest is not None:
+            return bridge_high_given_low(*ends, variance, lowest, uniform)
+        return bridge_high(*ends, variance, uniform)
+
+    def rows(self, asset: int) -> list[int]:
+        """What is simulated of which an asset's level is made."""
+        return [asset] if self.rates[asset] is None else [asset, self.rates[asset]]
+
+    def variance(self, step: int, asset: int) -> float:
+        """The variance of the log of an asset's level over a step."""
+        start, end, rows = (0.0, *self.grid)[step], self.grid[step], self.rows(asset)
+        return sum(self.market.covariance(one, other, start, end) for one in rows for other in rows)
+
+    def extreme(self, step: int, asset: int, log: float) -> float:
+        """The level that a bridge's extreme is."""
         market, start, end = self.market, (0.0, *self.grid)[step], self.grid[step]
-        rows = [asset] if self.rates[asset] is None else [asset, self.rates[asset]]
-        variance = sum(market.covariance(one, other, start, end) for one in rows for other in rows)
-        ends = sum(before[row] for row in rows), sum(after[row] for row in rows) - market.jump(asset, end)
-        bridge = bridge_low if side == "low" else bridge_high
-        level = math.exp(bridge(*ends, variance, uniform))
+        level = math.exp(log)
         if not self.escrows[asset]:
             return level
         return level + (market.escrow(asset, start) + market.escrow(asset, end, before=True)) / 2
@@ -402,12 +431,14 @@ class Reference:
                 if self.snap(watch.start.time) <= start and end <= self.snap(watch.end.time)
                 for side in self.sides[watch.running.name] if side[0] in self.assets}
 
-    def live(self, walk: Walk, time: float, levels: Value | None, low: Value | None, high: Value | None) -> bool:
+    def live(self, walk: Walk, time: float, levels: Value | None, low: Value | None, high: Value | None,
+             ends: tuple[tuple[float, ...], tuple[float, ...]]) -> bool:
         """All that happens at one time: running values in file order, then events; True if the contract ends."""
         moments = self.moments.get(time, [])
         todo: list[Watch | Update] = [update for moment in moments for update in moment.updates]
         todo += [watch for watch in self.dated.watches
                  if self.snap(watch.start.time) <= time <= self.snap(watch.end.time)]
+        before = dict(walk.values)
         for item in sorted(todo, key=lambda one: self.order[one.running.name]):
             if isinstance(item, Update):
                 walk.look(item.occasion, item.running, levels)
@@ -417,8 +448,15 @@ class Reference:
             for extreme in seen:
                 walk.look(None, item.running, extreme)
                 walk.observe(item.running)
+        for hit in self.dated.hits:
+            name = hit.event.at.name
+            if walk.values.get(name) and not before.get(name) and self.hit(walk, hit, time, ends):
+                return True
         events = [event for moment in moments for event in moment.events]
         for number, dated_event in enumerate(events):
+            name = dated_event.event.at.name
+            if dated_event.event.at.part == "once" and (before.get(name) or not walk.values[name]):
+                continue
             walk.look(dated_event.occasion, dated_event.event, levels)
             if walk.happen(dated_event):
                 if math.isnan(walk.result.life):  # nothing is paid with the end itself: what fell due that day, if any
@@ -426,6 +464,45 @@ class Reference:
                     walk.result.life = max(due, default=dated_event.occasion.day.time)
                 return True
         return False
+
+
+    def hit(self, walk: Walk, hit: DatedHit, time: float, ends: tuple[tuple[float, ...], tuple[float, ...]]) -> bool:
+        """What happens at the hit of a watch inside the step that ends at `time`; True if the contract ends."""
+        running, moment, levels = hit.watch.running, time, ends[1]
+        if time > self.snap(hit.watch.start.time):
+            ((asset, _),) = self.sides[running.name]
+            level, step = self.turning_level(walk, running, asset, ends[0]), self.grid.index(time)
+            d0, d1 = (abs(math.log(end[asset] / level)) for end in ends)
+            variance = self.variance(step, asset)
+            start = (0.0, *self.grid)[step]
+            moment = start + (time - start) * moment_of_hit(d0, d1, variance, *self.pair)
+            levels = tuple(level if k == asset else math.nan for k in range(len(levels)))
+        day, due = Day(moment), dict.fromkeys(hit.due, Day(moment))
+        if hit.days:  # a day ends with its close
+            number = next(k for k, one in enumerate(hit.days) if one.time >= moment - SAME_TIME)
+            day, due = hit.days[number], {pay: days[number] for pay, days in hit.due.items()}
+        else:
+            pays = [one for one in (*hit.event.then, *hit.event.otherwise) if isinstance(one, Pay)]
+            due = {pay: hit.due[pay][0] if pay in hit.due else day for pay in pays}
+        occasion = Occasion(day, "", 1, 1, math.nan, day.time - self.dated.start.time, {})
+        walk.look(occasion, hit.event, plain(levels))
+        ended = walk.happen(DatedEvent(hit.event, occasion, due))
+        if ended and math.isnan(walk.result.life):
+            walk.result.life = day.time
+        return ended
+
+    def turning_level(self, walk: Walk, running: Running, asset: int, levels: tuple[float, ...]) -> float:
+        """The level of an asset at which a flag turns, by halving between where it is and far beyond."""
+        def holds(level: float) -> bool:
+            walk.look(None, running, plain([level if k == asset else HUGE for k in range(len(levels))]))
+            return bool(walk.evaluate(running.formula))
+
+        calm = levels[asset]
+        far = TINY if holds(TINY) else HUGE
+        for _ in range(200):
+            middle = math.sqrt(calm * far)
+            calm, far = (calm, middle) if holds(middle) else (middle, far)
+        return far
 
 
 def running_label(running: Running) -> str:

@@ -17,7 +17,8 @@ from mcx.tape.program import Instruction, Leaf, LeafKind, LevelKey, Output, Tape
 NORMALS, UNIFORMS, LEAVES = 3, 2, 4
 TIMES = (0.0, 0.25, 0.5, 1.0)
 NUMBER_OPS = (Op.ADD, Op.SUB, Op.MUL, Op.NEG, Op.MIN, Op.MAX, Op.ABS, Op.STEP, Op.SELECT)
-GUARDED_OPS = (Op.DIV, Op.POW, Op.EXP, Op.LOG, Op.SQRT, Op.BRIDGE_LOW, Op.BRIDGE_HIGH)
+GUARDED_OPS = (Op.DIV, Op.POW, Op.EXP, Op.LOG, Op.SQRT, Op.BRIDGE_LOW, Op.BRIDGE_HIGH, Op.BRIDGE_CLEAR,
+               Op.BRIDGE_CORRIDOR, Op.BRIDGE_MOMENT, Op.LOOKUP)
 FLAG_OPS = (Op.LT, Op.LE, Op.EQ, Op.NE, Op.AND, Op.OR, Op.NOT)
 
 
@@ -103,6 +104,13 @@ def _grow(rng: np.random.Generator, raw: RawTape, uniforms: list[int]) -> None:
             raw.put(op, positive)
         elif op is Op.DIV:
             raw.put(op, number(), positive)
+        elif op is Op.BRIDGE_CLEAR:
+            raw.put(op, number(), number(), positive)
+        elif op is Op.BRIDGE_CORRIDOR:
+            raw.put(op, number(), number(), positive, raw.put(Op.ADD, positive, raw.constant(0.1)))
+            raw.put(op, number(), number(), raw.constant(one_of((0.5, 3.0))), raw.constant(one_of((0.05, 0.5))))
+        elif op is Op.LOOKUP:  # its entries are the same on every path
+            raw.put(op, number(), *(raw.constant(entry) for entry in (1.5, -2.0, 0.25)))
         elif op is Op.POW:
             raw.put(op, positive, raw.constant(one_of((-1.0, 0.5, 1.0, 1.5, 2.0, 3.0))))
             raw.put(op, positive, raw.put(Op.MIN, number(), raw.constant(2.0)))

@@ -7,7 +7,7 @@ shows neither. 400 runs of 4,096 paths each: the share of hits has a standard de
 from __future__ import annotations
 
 from dataclasses import dataclass
-from math import sqrt
+from math import exp, sqrt
 
 import closed_forms as forms
 import numpy as np
@@ -55,6 +55,14 @@ KNOWN = {
     "no touch": Known(
         "touch", "kind: no touch; direction: up; barrier: 110; cash: 1; watched: {continuous: [0y, 1y]}",
         forms.touch_at_expiry("up", "out", "cash", 110.0, 1.0, **FLAT)),
+    "double no touch": Known(
+        "double_touch", "kind: no touch; lower_barrier: 80; upper_barrier: 125; cash: 1; "
+                        "watched: {continuous: [0y, 1y]}",
+        exp(-0.04) * forms.double_no_touch(80.0, 125.0, **FLAT)),
+    "rebate at the hit": Known(
+        "barrier", "side: call; direction: down; knock: out; strike: 1000; barrier: 85; rebate_at_hit: 3; "
+                   "watched: {continuous: [0y, 1y]}",
+        forms.cash_at_hit("down", 85.0, 3.0, **FLAT)),
     "continuous lookback": Known(
         "lookback", "side: call; strike_type: fixed; strike: 105; watched: {continuous: [0y, 1y]}",
         forms.lookback_fixed("call", strike=105.0, **FLAT)),

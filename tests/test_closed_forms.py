@@ -10,6 +10,7 @@ BY_FORMULA = {
     "european": forms.european,
     "gap_option": forms.gap_option,
     "cash_or_nothing": forms.cash_or_nothing,
+    "cash_at_hit": forms.cash_at_hit,
     "asset_or_nothing": forms.asset_or_nothing,
     "supershare": forms.supershare,
     "touch_at_expiry": forms.touch_at_expiry,

@@ -39,6 +39,15 @@ def ready(example: Path) -> list[Ready]:
     return [ready_of(request, number) for number in range(len(request.contracts))]
 
 
+@cache
+def drawn(example: Path) -> list[Ready]:
+    """Every contract of an example file with the flags of its continuous watches drawn on each path; without those
+    that are priced between bounds, since several assets have no law to draw from."""
+    request = request_of(example)
+    return [ready_of(request, number, everything_drawn=True) for number in range(len(request.contracts))
+            if not ready(example)[number].unrolled.bracketed]
+
+
 @pytest.mark.parametrize("definition", sorted(PAYOFFS.glob("*.yaml")), ids=lambda path: path.stem)
 def test_definition_is_named_like_its_file_and_has_an_example(definition: Path):
     """A definition is found by its file's name, says what it is, and at least one example uses it."""
@@ -51,6 +60,8 @@ def test_definition_is_named_like_its_file_and_has_an_example(definition: Path):
 
 def plainly(output: Output, result: Result) -> float | None:
     """What the reference found for an output of the tape; None for those that it has nothing to say of."""
+    if " to " in output.day:  # between which dates a hit came
+        return None
     match output.kind:
         case "price":
             return result.price
@@ -85,7 +96,7 @@ def hold_against_reference(contract: Ready, paths: int) -> None:
 @pytest.mark.parametrize("example", [*EXAMPLES, *CORNERS], ids=lambda path: path.stem)
 def test_second_implementation_agrees(example: Path):
     """Every contract of every example, and of the files that visit the grammar's corners."""
-    for contract in ready(example):
+    for contract in drawn(example):
         hold_against_reference(contract, PATHS)
 
 
@@ -93,7 +104,7 @@ def test_second_implementation_agrees(example: Path):
 @given(contracts())
 def test_second_implementation_agrees_on_payoffs_made_up(text: str):
     """Payoffs of random formulas, running values and events mean the same to both."""
-    hold_against_reference(prepare(text), 16)
+    hold_against_reference(prepare(text, everything_drawn=True), 16)
 
 
 def test_levels_exactly_at_a_number():

@@ -50,7 +50,7 @@ def unrolled(example: str, number: int) -> tuple[DatedContract, UnrolledOtherwis
     made = request(example)
     dated = dated_of(made, number)
     nodes = MarketMap(made.market, dated.contract).nodes()
-    return dated, unroll_otherwise(dated, date_otherwise(dated), nodes=nodes)
+    return dated, unroll_otherwise(dated, date_otherwise(dated), nodes=nodes, everything_drawn=True)
 
 
 def reading_of(dated: DatedContract, name: str) -> DatedOtherwise:
@@ -220,6 +220,11 @@ readings:
     about: Both sides are watched continuously.
     terms:
       above: {continuous: [start, expiry]}
+  - name: a band
+    about: The upper side is a band.
+    running:
+      rose: {ever: 115 <= spot <= 130, at: above}
+    terms: {above: {continuous: [start, expiry]}}
   - name: the other side
     about: The upper side is watched continuously, the lower one at expiry.
     terms:
@@ -244,15 +249,16 @@ assets:
 
 
 def test_watches_are_refused_within_a_reading_and_not_across_readings():
-    """One reading watches both sides of an asset at once, which is refused; another only the side that the contract
-    does not watch, which has its own law beside the contract's."""
+    """One reading watches a band, which is refused; others both sides of an asset, or only the side that the contract
+    does not watch: each has its own law beside the contract's."""
     values = valued(TWO_SIDES, 17, 1 << 18)
-    assert [one.name for one in values.refused] == ["both all the time"]
+    assert [one.name for one in values.refused] == ["a band"]
     assert "from both sides at once" in str(values.refused[0].faults[0])
-    (other,) = values.readings
+    both, other = values.readings
     turned = TWO_SIDES.replace("  below: {continuous: [0y, 1y]}\n  above: expiry\n",
                                "  below: expiry\n  above: {continuous: [0y, 1y]}\n")
-    for found, text in ((values.price, TWO_SIDES), (other.price, turned)):
+    doubled = TWO_SIDES.replace("  above: expiry\n", "  above: {continuous: [0y, 1y]}\n")
+    for found, text in ((values.price, TWO_SIDES), (other.price, turned), (both.price, doubled)):
         alone = prepare(text).price(1 << 18, 18)
         assert abs(found.value - alone.mean) < 4 * np.hypot(found.standard_error, alone.error)
         assert found.standard_error < 5e-3 * found.value

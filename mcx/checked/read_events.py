@@ -8,7 +8,7 @@ from mcx.checked.formula import Formula
 from mcx.checked.names import Names
 from mcx.checked.payoff import Action, Assign, At, Continuous, Deliver, End, Event, Pay
 from mcx.checked.read_terms import few_enough
-from mcx.checked.reading import check_keys, items_of, later_version, listed, mapping_of, offered, one_of, read, text_of
+from mcx.checked.reading import check_keys, items_of, listed, mapping_of, offered, one_of, read, text_of
 from mcx.faults import Fault, did_you_mean
 from mcx.text.located import Mapping, Node, Scalar, Sequence
 from mcx.text.scalars import expected, shortened, word
@@ -44,7 +44,7 @@ class EventReader:
             return None
         check_keys(node, ("from", "until", "name", "if", "then", "else", *ACTIONS, *OF_DELIVER), ("at",), faults,
                    "the event")
-        at = None if "at" not in node else self.at(node.get("at"), types=("date", "dates"))
+        at = None if "at" not in node else self._when(node.get("at"))
         since, until = (self._date(node, key) for key in ("from", "until"))
         condition, then, otherwise = self._what(node)
         name = text_of(node, "name", faults)
@@ -203,11 +203,23 @@ class EventReader:
 
     # Dates
 
+    def _when(self, node: Node) -> At | None:
+        """When an event happens: on dates, or at the moment at which a running flag first holds."""
+        if not (isinstance(node, Mapping) and "once" in node):
+            return self.at(node, types=("date", "dates"))
+        if not check_keys(node, (), ("once",), self.faults, "the moment of a hit"):
+            return None
+        name = node.get("once")
+        if not isinstance(name, Scalar):
+            self.faults.append(expected("the name of a running value, as 'once: touched'", name))
+            return None
+        return None if name.text in self.names.broken else At(name.text, name.place, "once")
+
     def at(self, node: Node, *, types: tuple[str, ...]) -> At | None:
         """When something happens; `types` are the types of term that may say it."""
         if isinstance(node, Mapping) and "once" in node:
-            # The moment of a hit: `At(name, place, "once")` once the dates and the tape know it.
-            self.faults.append(later_version(node.key("once"), "'once', the moment of a hit, is"))
+            self.faults.append(Fault(node.key("once").place, "'once', the moment of a hit, is for events; a running "
+                                                             "value is observed on dates or continuously"))
             return None
         found = AT.fullmatch(node.text) if isinstance(node, Scalar) else None
         if not found:

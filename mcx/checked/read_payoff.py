@@ -9,6 +9,7 @@ from __future__ import annotations
 import re
 from dataclasses import dataclass, replace
 
+from mcx.checked.at_the_hit import hit_faults
 from mcx.checked.formula import Formula
 from mcx.checked.kinds import Kind
 from mcx.checked.names import Names, in_order
@@ -50,12 +51,17 @@ def read_payoff(
     found = reader.read()
     if faults or reader.faults or found is None or name is None:
         return None, faults + reader.faults
-    payoff = Payoff(name, about, terms, *found, body.get("payoff").place, (fewest, most), pays)
+    lets, running, events = found
+    faults = hit_faults(terms, lets, running, events)
+    if faults:
+        return None, faults
+    payoff = Payoff(name, about, terms, lets, running, events, body.get("payoff").place, (fewest, most), pays)
 
     def read_again(changed: Mapping) -> tuple[Payoff | None, list[Fault]]:
         again = _Reader(changed, terms, count == 1, asset_names if assets else None)
         lets, running, events = again.read()
-        return (None if again.faults else replace(payoff, lets=lets, running=running, events=events)), again.faults
+        wrong = again.faults or hit_faults(terms, lets, running, events)
+        return (None if wrong else replace(payoff, lets=lets, running=running, events=events)), wrong
 
     readings, faults = read_readings(body, payoff, read_again)
     return (None if faults else replace(payoff, readings=readings)), faults

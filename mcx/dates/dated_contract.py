@@ -66,6 +66,21 @@ class DatedEvent:
 
 
 @dataclass(frozen=True, slots=True)
+class DatedHit:
+    """An event at the moment at which a continuously watched flag first holds.
+
+    `days` are the calendar days of the watch, its first one included; `due` gives for each Pay action, for a hit on
+    each of them, when the amount is paid. A textbook contract has no days: there `due` holds the fixed dates only (one
+    entry), and what has none is paid at the moment itself.
+    """
+
+    event: Event
+    watch: Watch
+    days: tuple[Day, ...]
+    due: dict[Pay, tuple[Day, ...]]
+
+
+@dataclass(frozen=True, slots=True)
 class Moment:
     """All that happens on one day: first the running values, then the events, both in file order."""
 
@@ -76,7 +91,7 @@ class Moment:
 
 @dataclass(frozen=True, slots=True)
 class DatedContract:
-    """Moments in order of time, and the continuous watches beside them.
+    """Moments in order of time, and the continuous watches and what happens at their hits beside them.
 
     `schedules` gives the days of every date, dates and (dated) watch term. `calendar_version` names the holiday
     package and its version, '' where no holidays were asked for. `assumptions` are sentences to print with any value. `history` is
@@ -91,6 +106,7 @@ class DatedContract:
     watches: tuple[Watch, ...]
     calendar_version: str = ""
     assumptions: tuple[str, ...] = ()
+    hits: tuple[DatedHit, ...] = ()
     history: History = NO_HISTORY
 
     @property

@@ -16,7 +16,7 @@ from mcx.checked.market import Market
 from mcx.checked.payoff import At, Continuous, Event, Pay, Payoff, Running
 from mcx.checked.term_values import DATED_TYPES, NUMERIC
 from mcx.dates.business_days import NotCovered, good_days
-from mcx.dates.dated_contract import Day, DatedContract, DatedEvent, Moment, Occasion, Update, Watch
+from mcx.dates.dated_contract import Day, DatedContract, DatedEvent, DatedHit, Moment, Occasion, Update, Watch
 from mcx.dates.day_counts import ICMA, actual_365_fixed, year_fraction
 from mcx.dates.history import NO_HISTORY, History, history_of, said
 from mcx.dates.readable import readings
@@ -115,6 +115,7 @@ class _Dating:
         self.updates: dict[Day, list[Update]] = {}
         self.events: dict[Day, list[DatedEvent]] = {}
         self.watches: list[Watch] = []
+        self.hits: list[DatedHit] = []
         self.unwatched = False  # whether a watch is at fault, so that its running value has no date
 
     def dated(self) -> tuple[DatedContract | None, list[Fault]]:
@@ -127,7 +128,7 @@ class _Dating:
         if not self._can_be_read():
             return None, self.faults
         self._refuse_needless_statements(days)
-        if not days and not self.faults:
+        if not days and not self.hits and not self.faults:
             self._fault(self.contract.place, "nothing is ever observed or paid: no event has a date")
         dated = DatedContract(
             contract=self.contract, valuation=self.valuation, start=self.start, schedules=self.schedules,
@@ -136,10 +137,10 @@ class _Dating:
             watches=tuple(self.watches), calendar_version=self._calendar_version(),
             assumptions=(*self.contract.assumptions, *dict.fromkeys(self.assumptions),
                          *said(self.contract, self.history)),
-            history=replace(self.history, eve=self._eve()))
-        live, faults = readings(dated)
+            history=replace(self.history, eve=self._eve()), hits=tuple(self.hits))
+        live, idle, faults = readings(dated)
         faults += self.faults
-        return (None if faults else _only(dated, live)), faults
+        return (None if faults else _only(dated, live, idle)), faults
 
     def _refuse_needless_statements(self, days: list[Day]) -> None:
         """Disrupted days on which nothing is observed, and statements about what is not watched all the time."""
@@ -229,10 +230,16 @@ class _Dating:
 
     def _happen(self, event: Event) -> None:
         """The days of an event, and of every payment in it."""
-        if event.at.part == "once":
-            self._fault(event.at.place, "'once' needs the moment of a hit, which a later version reads")
-            return
-        occasions = self._occasions(event.at, event.since, event.until)
+        at = event.at
+        if at.part == "once":
+            watch = next((watch for watch in self.watches if watch.running.name == at.name), None)
+            if watch is not None:
+                self._hit(event, watch)
+                return
+            at = next(running.at for running in self.payoff.running if running.name == at.name)
+            if isinstance(at, Continuous) or isinstance(self.contract.terms.get(at.name), Stretch):
+                return  # one of its dates is not stated, or at fault
+        occasions = self._occasions(at, event.since, event.until)
         if not occasions and event.at.name in self.schedules and not {event.since, event.until} & self.unread:
             dates = f"'{event.at.name}.{event.at.part}'" if event.at.part else f"'{event.at.name}'"
             dates += f" from '{event.since}'" if event.since else ""
@@ -242,6 +249,33 @@ class _Dating:
         for occasion in occasions:
             due = {pay: self._due(pay, occasion) for pay in pays}
             self.events.setdefault(occasion.day, []).append(DatedEvent(event, occasion, due))
+
+    def _hit(self, event: Event, watch: Watch) -> None:
+        """What happens at the moment of a hit, with every day on which it may come and when its amounts are paid."""
+        pays = [action for action in (*event.then, *event.otherwise) if isinstance(action, Pay)]
+        if self.contract.textbook:
+            fixed = {pay: self.schedules[pay.due][:1] for pay in pays if pay.due in self.schedules}
+            for pay, (due,) in fixed.items():
+                self._refuse_before(pay, watch.end, due)
+            self.hits.append(DatedHit(event, watch, (), fixed))
+            return
+        length = (watch.end.date - watch.start.date).days
+        days = tuple(self.terms.day(watch.start.date + datetime.timedelta(days=k)) for k in range(length + 1))
+        due = {}
+        for pay in pays:
+            if pay.due == "same day" or pay.due in self.unread:
+                due[pay] = days
+            elif pay.due in self.schedules:
+                self._refuse_before(pay, watch.end, self.schedules[pay.due][0])
+                due[pay] = self.schedules[pay.due][:1] * len(days)
+            else:
+                due[pay] = tuple(self._after_lag(day) for day in days)
+        self.hits.append(DatedHit(event, watch, days, due))
+
+    def _refuse_before(self, pay: Pay, day: Day, due: Day) -> None:
+        if due.time < day.time:
+            self._fault(place_of(self.contract.terms[pay.due], 0),
+                        f"the payment of what is watched until {day} falls due before, on {due}")
 
     def _occasions(self, at: At, since: str = "", until: str = "") -> list[Occasion]:
         """The dates of a schedule, or the part of them that is meant, numbered as in the whole schedule."""
@@ -329,16 +363,21 @@ class _Dating:
             return day
 
 
-def _only(dated: DatedContract, live: frozenset[str]) -> DatedContract:
-    """Without the running values that nothing reads: they are not observed."""
+def _only(dated: DatedContract, live: frozenset[str], idle: frozenset[Place]) -> DatedContract:
+    """Without the running values that nothing reads, which are not observed, and the hits that nothing happens at."""
     moments = []
     for moment in dated.moments:
         updates = tuple(update for update in moment.updates if update.running.name in live)
-        if updates or moment.events:
-            moments.append(replace(moment, updates=updates))
+        events = tuple(each for each in moment.events if each.event.place not in idle)
+        if updates or events:
+            moments.append(replace(moment, updates=updates, events=events))
     watches = tuple(watch for watch in dated.watches if watch.running.name in live)
     today = [_today(dated) for moment in moments if moment.day.date and moment.day.date == dated.valuation]
-    return replace(dated, moments=tuple(moments), watches=watches, assumptions=(*dated.assumptions, *today))
+    hits = tuple(hit for hit in dated.hits if hit.event.place not in idle)
+    by_day = [f"a hit of '{hit.watch.running.name}' counts for the calendar day on which it comes, weekends and "
+              f"holidays included; a day runs from one close to the next" for hit in hits if hit.due and hit.days]
+    return replace(dated, moments=tuple(moments), watches=watches, hits=hits,
+                   assumptions=(*dated.assumptions, *today, *dict.fromkeys(by_day)))
 
 
 def _today(dated: DatedContract) -> str:

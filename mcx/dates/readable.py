@@ -73,10 +73,10 @@ class Seen:
             self.running[name] = reading
 
 
-def readings(dated: DatedContract) -> tuple[frozenset[str], list[Fault]]:
-    """The running values that payments depend on, and the faults of reading: names without a value where
-    they are read, divisions by 0, observations after the last reading, and optional terms that the contract states
-    but nothing reads."""
+def readings(dated: DatedContract) -> tuple[frozenset[str], frozenset[Place], list[Fault]]:
+    """The running values that payments depend on, the events at hits that the terms rule out, and the faults of
+    reading: names without a value where they are read, divisions by 0, observations after the last reading, and
+    optional terms that the contract states but nothing reads."""
     walk = _Walk(dated)
     walk.along()
     payoff = dated.contract.payoff
@@ -93,7 +93,7 @@ def readings(dated: DatedContract) -> tuple[frozenset[str], list[Fault]]:
     faults = list(counted.wrong.values()) or _never_read(dated.contract, counted.terms)
     begun = {name: reading for name, reading in counted.running.items() if name not in counted.wrong}
     faults += _seen_in_vain(dated.contract, begun, walk.observed)
-    return frozenset(live), sorted(faults)
+    return frozenset(live), frozenset(walk.idle), sorted(faults)
 
 
 def _seen_in_vain(
@@ -140,6 +140,7 @@ class _Walk:
         self.occasion: Occasion | None = None
         self.owner = Seen()
         self.owner_place: Place | None = None
+        self.idle: set[Place] = set()
 
     def along(self) -> None:
         for running in self.running.values():
@@ -154,6 +155,9 @@ class _Walk:
             self._read(watch.running.formula)
             at = watch.running.at
             self.observed[watch.running.name] = watch.end, at if isinstance(at, At) else at.end, -1
+        for hit in self.dated.hits:
+            day = hit.watch.end
+            self._happen(DatedEvent(hit.event, Occasion(day, "", 1, 1, math.nan, day.time, {}), {}))
         for moment in self.dated.moments:
             for update in moment.updates:
                 self._begin_watches(moment.day.time, self.order[update.running.name])
@@ -181,14 +185,21 @@ class _Walk:
         """Reads an event; True if it ends the contract on every path."""
         event = dated_event.event
         self._look(event, dated_event.occasion)
+        once = event.at.part == "once"
         holds = self._read(event.condition) if event.condition is not None else 1.0
+        if once and holds == 0.0 and not event.otherwise:
+            self.idle.add(event.place)
+        elif once:
+            occasion = dated_event.occasion
+            self.owner.reads(event.at.name, Reading(occasion.day, occasion.schedule, event.at.place))
         fresh = self._memory(*_formulas(event))
         before = self.known
         after = [self._act(actions, before) for actions, taken in (
             (event.then, holds is None or holds), (event.otherwise, not holds)) if taken]
+        after += [before] if once else []
         self.known = {name: value for name, value in after[0].items() if after[-1].get(name) == value}
         self.remembered |= fresh
-        return bool(holds) and any(isinstance(action, End) for action in event.then)
+        return bool(holds) and not once and any(isinstance(action, End) for action in event.then)
 
     def _act(self, actions: tuple[Action, ...], known: dict[str, float]) -> dict[str, float]:
         """Reads the actions of one branch; the running values that are known after it."""

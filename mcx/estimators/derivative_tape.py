@@ -7,7 +7,11 @@ with the levels held. A payment is multiplied only by scores of steps up to the 
 ones have mean zero given all that it depends on.
 
 Second derivatives by the spots: of the pathwise part the likelihood ratio of its delta, of the other part the
-second-order score.
+second-order score. What reads the spot openly beside the levels, as the chance that a barrier is not reached in the
+first step does, adds its own derivatives with the levels held.
+
+The moments of hits share their draws, so that only the law of each by itself is known. Their scores multiply what is
+paid at that moment, less the same at another moment that is given: the score's mean is zero given the levels.
 """
 
 from __future__ import annotations
@@ -17,11 +21,11 @@ from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
 from itertools import accumulate, combinations_with_replacement
 
-from mcx.tape.adjoint import Gradient, finished, of_the_market, on_paths, sums_of, sweep
+from mcx.tape.adjoint import Gradient, along, finished, of_the_market, sums_of, sweep
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
 from mcx.tape.program import LeafKind, Sum, Tape, spot_leaf
-from mcx.tape.scores import BRIDGES, Scores, latest_steps, scores
+from mcx.tape.scores import DRAWN, Scores, latest_steps, moment_scores, scores
 from mcx.tape.steps import Grid
 
 Numbers = tuple[int, ...]  # of sums; where controls stand with them, each after what it is a control of
@@ -40,10 +44,11 @@ class DerivativeTape:
     derived, controls   derivatives by leaves, and their controls
     by_score, by_path   derivatives by leaves of a smooth stand-in for what jumps, in both ways: the same in the mean
     crossed             for each pair of spots the two likelihood ratios of the one's pathwise delta by the other
-    curved              for each pair the sum with the second-order score, and its control
+    curved              for each pair the sum with the second-order score, its control, and what is read openly
     tied                by asset the likelihood ratio of the pathwise part, and its delta: the same in the mean
     stood               for each pair the stand-in times the second-order score, and `crossed` of its own delta
     rough               whether `curved` has no finite variance
+    timed               whether it lacks the second-order score of a hit's moment
 
     The last sum is the price.
     """
@@ -58,6 +63,7 @@ class DerivativeTape:
     tied: dict[int, tuple[Numbers, int]]
     stood: tuple[tuple[Numbers, ...], ...]
     rough: bool
+    timed: bool
 
 
 def derivative_tape(
@@ -85,7 +91,7 @@ def derivative_tape(
     ranges = [range(end - len(group), end) for group, end in zip(groups, ends, strict=True)][:-1]
     made = finished(making.builder, tape, [part for group in groups for part in group])
     return DerivativeTape(made, *ranges, tuple(crossed), tuple(curved), tied, tuple(stood),
-                          rough=bool(likelihood and making.law.edges))
+                          rough=bool(likelihood and making.law.edges), timed=bool(making.moments))
 
 
 class _Making:
@@ -103,14 +109,15 @@ class _Making:
         self.by_score, self.by_path = [], []  # of the stand-in
         last = max(self.later, default=min(1, len(grid.times) - 1))
         self.law: Scores = scores(self.builder, tape, grid, known, last)
+        self.moments = _at_moments(self.builder, tape, likelihood)
+        self.opened = _Opened(self.builder, tape)
         self.slopes = _by_log_spots(self.builder, tape, self.smooth, self.law.spots) if self.smooth else {}
         self.proxy_slopes: dict[int, int] = {}
 
     def by_likelihood(self) -> None:
         """First derivatives of the payments that jump, with their controls."""
         builder, later = self.builder, self.later
-        held = {number for number, step in enumerate(self.tape.instructions) if step.op in (Op.STEP, *BRIDGES)}
-        self.derived += sums_of(sweep(builder, _counted(builder, self.likelihood), of_the_market, held))
+        self.derived += sums_of(sweep(builder, _counted(builder, self.likelihood), of_the_market, _drawn(self.tape)))
         for score in self.law.first:
             if score.step in later:
                 leaf = builder.leaf(score.leaf)
@@ -120,6 +127,11 @@ class _Making:
             leaf = builder.leaf(spot_leaf(self.tape.leaves, edge.asset))
             self.derived.append(Sum(replaced(builder, later[1], edge.extreme, edge.start), edge.weight, leaf))
             self.controls.append(Sum(edge.weight, None, leaf))
+        for moment, paid in self.moments.items():
+            for score in moment_scores(builder, self.tape, moment):
+                leaf = builder.leaf(score.leaf)
+                self.derived.append(Sum(paid, score.value, leaf))
+                self.controls.append(Sum(score.value, None, leaf))
         if self.proxy is not None:
             self._stand_in(self.proxy)
 
@@ -167,7 +179,7 @@ class _Making:
         if 1 not in self.later or pair not in self.law.second:
             return ()
         bend = self.law.second[pair]
-        return self.noted(Sum(self.later[1], bend), Sum(bend))
+        return self.noted(Sum(self.later[1], bend), Sum(bend), *self._bent(self.later[1], pair))
 
     def tied(self) -> dict[int, tuple[Numbers, int]]:
         return {asset: (self.noted(*self._by_score(self.total, asset)), *self.noted(Sum(slope)))
@@ -177,11 +189,64 @@ class _Making:
         """The likelihood ratio of a value by an asset's log spot: sums and their controls in turn."""
         move = self.law.spots[asset]
         found = [Sum(value, move), Sum(move)]
+        openly = self.opened.by(value, asset)
+        if openly is not None:
+            found += [Sum(openly), Sum(self.builder.constant(0.0))]
         for edge in self.law.edges:
             if edge.asset == asset:
                 there = replaced(self.builder, value, edge.extreme, edge.start)
                 found += [Sum(there, edge.weight), Sum(edge.weight)]
         return found
+
+    def _bent(self, value: int, pair: tuple[int, int]) -> list[Sum]:
+        """What a value that reads the spots openly adds to its second-order likelihood ratio."""
+        found = []
+        for one, other in (pair, pair[::-1]):
+            slope = self.opened.by(value, one)
+            if slope is not None:
+                found.append(Sum(slope, self.law.spots[other]))
+        first = self.opened.by(value, pair[0])
+        bend = None if first is None else self.opened.by(first, pair[1])
+        return found if bend is None else [*found, Sum(bend)]
+
+
+def _drawn(tape: Tape) -> set[int]:
+    """What a likelihood ratio holds where it is."""
+    return {number for number, step in enumerate(tape.instructions) if step.op in (Op.STEP, *DRAWN)}
+
+
+class _Opened:
+    """Derivatives by log spots of values on each path, with all that is drawn held."""
+
+    def __init__(self, builder: Builder, tape: Tape):
+        self.builder, self.tape, self.held = builder, tape, _drawn(tape)
+        self.chances = any(step.op in (Op.BRIDGE_CLEAR, Op.BRIDGE_CORRIDOR) for step in tape.instructions)
+
+    def by(self, value: int, asset: int) -> int | None:
+        """A value of the tape; None where it is 0: nothing but chances reads a spot beside later levels."""
+        if not self.chances:
+            return None
+        spot = spot_leaf(self.tape.leaves, asset)
+        one = self.builder.constant(1.0)
+        gradient = sweep(self.builder, {value: one}, lambda leaf: leaf == spot, self.held)
+        found = along(self.builder, gradient, self.builder.leaf(spot))
+        return None if self.builder.number(found) == 0.0 else found
+
+
+def _at_moments(builder: Builder, tape: Tape, payments: Iterable[int]) -> dict[int, int]:
+    """For each moment of a hit what is paid at it, less the same with the hit half way through the step."""
+    reads: list[frozenset[int]] = []
+    for number, step in enumerate(tape.instructions):
+        found = frozenset().union(*(reads[k] for k in step.operands))
+        reads.append(found | {number} if step.op is Op.BRIDGE_MOMENT else found)
+    paid: dict[int, int] = {}
+    half = builder.constant(0.5)
+    for payment, count in Counter(payments).items():
+        for moment in sorted(reads[payment]):
+            part = builder.emit(Op.SUB, payment, replaced(builder, payment, moment, half))
+            part = builder.emit(Op.MUL, part, builder.constant(float(count)))
+            paid[moment] = builder.emit(Op.ADD, paid[moment], part) if moment in paid else part
+    return paid
 
 
 def _counted(builder: Builder, values: Iterable[int]) -> dict[int, int]:
@@ -200,17 +265,8 @@ def replaced(builder: Builder, value: int, old: int, new: int) -> int:
 
 
 def _by_log_spots(builder: Builder, tape: Tape, gradient: Gradient, assets: Iterable[int]) -> dict[int, int]:
-    """By asset the derivative by its log spot as a value on each path: paths read it alone, or with the first drift
-    added."""
-    spots = {asset: builder.leaf(spot_leaf(tape.leaves, asset)) for asset in assets}
-    read = {spot: [spot] for spot in spots.values()}
-    for number, step in enumerate(tape.instructions):
-        if step.op is Op.ADD:
-            for operand in step.operands:
-                if operand in read:
-                    read[operand].append(number)
-    return {asset: on_paths(builder, [part for value in read[spot] for part in gradient.get(value, ())])
-            for asset, spot in spots.items()}
+    """By asset the derivative by its log spot as a value on each path."""
+    return {asset: along(builder, gradient, builder.leaf(spot_leaf(tape.leaves, asset))) for asset in assets}
 
 
 def _later(builder: Builder, tape: Tape, grid: Grid, payments: Sequence[int]) -> dict[int, int]:

@@ -116,8 +116,8 @@ class Differentiator:
                 second[:, pair] += 0.5 * sums[:, parts[0::2]].sum(axis=1)
                 controls[:, pair, side] = sums[:, parts[1::2]].sum(axis=1)
             if made.curved[pair]:
-                bent, score = made.curved[pair]
-                second[:, pair] += sums[:, bent]
+                bent, score, *openly = made.curved[pair]
+                second[:, pair] += sums[:, [bent, *openly]].sum(axis=1)
                 controls[:, pair, 2] = sums[:, score]
             if one == other:
                 second[:, pair] -= levels[0] * first[:, spots[one]]

@@ -82,7 +82,7 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
     places = tuple({(jump.kind, jump.place): jump for payment in jumping for jump in found[payment]}.values())
     leaf_values = dict(zip(tape.leaves, values, strict=True))
     simulated = (*contract.assets, *simulated_rates(contract.conversion, contract.currency, market))
-    still = without_own_randomness(leaf_values, simulated)
+    still = without_own_randomness(leaf_values, simulated) or joint_extremes(tape)
 
     def by_path(with_basis: Tape) -> np.ndarray:
         return values_by_path(lower(with_basis, values), seed=pilot.seed, paths=pilot.paths, stream=pilot.stream,
@@ -139,6 +139,15 @@ def without_own_randomness(values: dict[Leaf, float], names: Sequence[str]) -> s
     return ""
 
 
+def joint_extremes(tape: Tape) -> str:
+    """Why there is no score: an asset's lowest and highest level are drawn together; '' where none are."""
+    place = next((step.place for step in tape.instructions if step.op is Op.BRIDGE_RANGE), None)
+    if any(step.op is Op.BRIDGE_RANGE for step in tape.instructions):
+        return (f"the lowest and the highest level of one asset are drawn together{f' at {place}' if place else ''}, and "
+                f"the score of their joint law is not taken")
+    return ""
+
+
 def read_today(tape: Tape, known: Sequence[float | None]) -> str:
     """Why a likelihood ratio by a spot would miss something: today's level is compared with one that is drawn, and
     moves while that is held; '' where it is not."""
@@ -167,6 +176,8 @@ def dividends_compared(tape: Tape, known: Sequence[float | None]) -> str:
 
 def second_order_trouble(tape: Tape, made: DerivativeTape) -> str:
     """Why there is no gamma; '' where there is one."""
+    if made.timed:
+        return "an amount is paid at the moment of a hit, of whose law the second-order score is not taken"
     if any(map(_is_today, tape.instructions)):
         return "the payoff reads today's level itself beside later ones; a second derivative through both is not taken"
     if made.rough:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import time
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
@@ -10,9 +11,10 @@ import numpy as np
 
 from mcx.checked.market import Market
 from mcx.dates.dated_contract import DatedContract
-from mcx.estimators.estimate import Estimate, estimates
+from mcx.estimators.bracket import PILOT, Refinement, refine
+from mcx.estimators.estimate import NORMAL_95, Estimate, estimates
 from mcx.estimators.pace import announce, pace
-from mcx.estimators.plan import FEWEST_PATHS, Plan, Precision, plan
+from mcx.estimators.plan import FEWEST_PATHS, GROUP, Plan, Precision, plan, whole_groups
 from mcx.faults import Fault
 from mcx.leaves.market_map import MarketMap
 from mcx.machine.run import BlockSums, Notice, Stream, load_kernels, run, values_by_path
@@ -40,7 +42,8 @@ class Valuation:
     """Every output of a contract's tape with its error.
 
     outputs and results belong together, price first; `stages` is the price at a quarter, half and all of the paths;
-    `seconds` the time of the main run.
+    `seconds` the time of the main run; `ready` the contract as it was run, with refined steps; `refinement` how fine
+    these are, where the price lies between bounds.
     """
 
     outputs: tuple[Output, ...]
@@ -50,6 +53,8 @@ class Valuation:
     seed: int
     seconds: float
     interrupted: bool
+    ready: Ready | None = None
+    refinement: Refinement | None = None
 
     @property
     def price(self) -> Estimate:
@@ -62,15 +67,22 @@ class Valuation:
 
 
 def prepare(dated: DatedContract, market: Market) -> tuple[Ready | None, tuple[Fault, ...]]:
-    """The program of a contract on a market, and what the tape refuses."""
+    """The program of a contract on a market, and what the tape refuses.
+
+    Where several assets are watched together (`unrolled.bracketed`) its steps are not refined yet; `value` does that.
+    """
     market_map = MarketMap.of(market, dated)
     if faults := market_map.faults():
         return None, tuple(faults)
-    unrolled = unroll(dated, nodes=market_map.nodes(), makeup=market_map.makeup())
-    if unrolled.faults:
+    unrolled, program = _made(dated, market_map, 1)
+    if program is None:
         return None, unrolled.faults
-    program = lower(unrolled.tape, market_map.values(unrolled.tape.leaves))
     return Ready(dated, market_map, unrolled, program), ()
+
+
+def _made(dated: DatedContract, market: MarketMap, pieces: int) -> tuple[Unrolled, Program | None]:
+    unrolled = unroll(dated, nodes=market.nodes(), makeup=market.makeup(), pieces=pieces)
+    return unrolled, None if unrolled.faults else lower(unrolled.tape, market.values(unrolled.tape.leaves))
 
 
 def value(
@@ -79,11 +91,14 @@ def value(
     *,
     seed: int,
     threads: int | None = None,
+    pieces: int | None = None,
     progress: Progress | None = None,
     notice: Notice | None = None,
 ) -> Valuation:
     """The value of a contract; `threads` None takes all, and changes no digit.
 
+    Where the price lies between bounds the steps are refined until these are closer than the 95 % half-width asked for,
+    or that of the paths asked for; `pieces` prescribes the refinement (see `estimators.bracket`), as a replay must.
     `notice` is told if kernels must be compiled first, and of a run that will take long. Raises RequestError where the
     precision asked for cannot be reached, NonFinitePath (of `machine.run`) where a path gives no finite number, and
     KeyboardInterrupt if that comes before there is an estimate.
@@ -102,9 +117,17 @@ def value(
         return time.perf_counter() - begun
 
     load_kernels(ready.program, notice)  # before any clock starts
-    speed = pace([ready.program], threads)
-    planned = plan(asked, prices, seconds_for, exact=price.outputs[0] < 0, pace=speed)
-    announce(planned.paths, speed, notice)
+    planned = plan(asked, prices, seconds_for, exact=price.outputs[0] < 0, pace=pace([ready.program], threads))
+    refinement = None
+    if ready.unrolled.bracketed:
+        target = planned.target or NORMAL_95 * float(prices(PILOT).std(ddof=1)) / math.sqrt(planned.paths)
+        unrolled, program, refinement = refine(lambda number: _made(ready.dated, ready.market, number), target,
+                                               seed=seed, threads=threads, pieces=pieces)
+        ready = replace(ready, unrolled=unrolled, program=program)
+        outputs = unrolled.tape.outputs
+        if asked.seconds is not None:  # finer steps leave time for fewer paths
+            planned = replace(planned, paths=whole_groups(max(planned.paths / refinement.cost, GROUP)))
+    announce(planned.paths, pace([ready.program], threads), notice)
     begun = time.perf_counter()
     sums = run(ready.program, paths=planned.paths, snapshots=[planned.paths // share for share in SHARES],
                progress=_counted(progress, planned), **how)
@@ -112,7 +135,7 @@ def value(
     if sums.paths < FEWEST_PATHS:
         raise KeyboardInterrupt
     results = estimates(sums.paths, sums.mean, sums.m2)
-    return Valuation(outputs, results, _stages(sums), planned, seed, seconds, sums.interrupted)
+    return Valuation(outputs, results, _stages(sums), planned, seed, seconds, sums.interrupted, ready, refinement)
 
 
 def _counted(progress: Progress | None, planned: Plan) -> Callable[[int, float, float], None] | None:

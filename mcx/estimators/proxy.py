@@ -28,7 +28,10 @@ def with_proxy(
     """The tape with the stand-in for the sum of the payments as its last value, and its number; None where too little
     is explained. `log_spots`: today's, by asset, as plain numbers."""
     builder = Builder.of(tape)
-    basis = _basis(builder, last_logs(tape), log_spots)
+    logs = last_logs(tape)
+    if not logs:  # nothing is drawn
+        return tape, None
+    basis = _basis(builder, logs, log_spots)
     total = builder.fold(Op.ADD, payments)
     outputs = [Output("", value) for value in (total, *basis)]
     values = by_path(builder.tape(outputs, tape.normals, tape.uniforms))

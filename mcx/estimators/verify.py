@@ -112,13 +112,13 @@ class Bench:
 
     def __init__(self, ready: Ready, market: Market, asked: Precision, *, seed: int, threads: int | None = None,
                  progress: Callable[[int, int, float], None] | None = None, notice: Notice | None = None):
-        self.ready, self.market = ready, market
-        self.contract = ready.dated.contract
+        self.market, self.contract = market, ready.dated.contract
         self.valuation = value(ready, asked, seed=seed, threads=threads, progress=progress, notice=notice)
         if self.valuation.interrupted:
             raise KeyboardInterrupt
+        self.ready = self.valuation.ready  # where the price lies between bounds, with steps that bring them together
         self.sampling = Sampling(seed, self.valuation.price.paths, Stream.MAIN, threads, notice=notice)
-        self.revaluer = Revaluer.of(ready.unrolled.tape, self.contract)
+        self.revaluer = Revaluer.of(self.ready.unrolled.tape, self.contract)
         self._seen: dict[tuple[tuple[Input, float], ...], Compared] = {}
 
     def at(self, shifts: Mapping[Input, float]) -> Compared:
@@ -130,7 +130,7 @@ class Bench:
 
     @cached_property
     def certain(self) -> Certain:
-        return certain(self.ready.dated)
+        return certain(self.ready.dated, self.ready.market.nodes())
 
     @cached_property
     def funding(self) -> Estimate | None:
@@ -197,9 +197,10 @@ class Compared:
 
     @cached_property
     def readings(self) -> ReadingsValuation:
-        sampling = self.bench.sampling
+        sampling, refinement = self.bench.sampling, self.bench.valuation.refinement
         found = value_readings(self.bench.ready.dated, self.market, paths=sampling.paths, seed=sampling.seed,
-                               threads=sampling.threads, notice=sampling.notice)
+                               pieces=refinement.pieces if refinement else 1, threads=sampling.threads,
+                               notice=sampling.notice)
         if found.interrupted:
             raise KeyboardInterrupt
         return found

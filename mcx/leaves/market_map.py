@@ -91,14 +91,15 @@ class MarketMap:
         return found
 
     def nodes(self) -> tuple[float, ...]:
-        """The times at which a drift or a vol of what is simulated changes, and ex dates, in years."""
+        """The times at which a drift or a vol of what is simulated changes or the contract's discounting, and ex dates,
+        in years."""
         market, own = self.market, self.contract.currency
         curves = [market.rates.get(asset.currency or own) for asset in self.quotes]
         curves += [curve for asset in self.quotes for curve in (asset.dividend_yield, asset.forwards, asset.vol)]
         curves += [asset.quanto.fx_vol for asset, meets in zip(self.quotes, self._exchanges, strict=True)
                    if meets and meets.number is None]
         curves += [each.vol for each in self.rates_of_exchange]
-        curves += [market.rates[own]] if self.rates_of_exchange else []
+        curves += [market.rates[own], market.funding.get(own)]  # also for amounts paid at a hit
         times = {node.time for curve in curves if curve for node in curve.nodes}
         for asset, paid in zip(self.quotes, self._payouts, strict=True):
             times |= {*paid.share_times, *(() if asset.decrement else paid.cash_times)}

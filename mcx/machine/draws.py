@@ -53,8 +53,9 @@ def drawing_of(plan: DrawPlan, normals: int, uniforms: int, seed: int, stream: i
     by_row = np.arange(normals + uniforms)
     order = np.empty((0, 0, LEADING)), np.empty((0, 0, LEADING)), np.empty((0, 2), np.int32), np.empty((0, 2))
     if plan.order is not None:
-        assert len(plan.order.coordinates) == normals, "an order for another program"
-        by_row[:normals] = plan.order.coordinates
+        ordered = len(plan.order.coordinates)  # of all steps; the moments of hits take one more normal
+        assert normals - 1 <= ordered <= normals, "an order for another program"
+        by_row[:ordered] = plan.order.coordinates
         order = plan.order.left, plan.order.right, plan.order.pairs, plan.order.turns
     rows = normals + uniforms if plan.scrambles else 0
     numbers = directions(rows)[by_row[:rows]]

@@ -53,6 +53,20 @@ class Form(IntEnum):
     DRIFT_STEP_RSSR = auto()  # x + m + s z: a step and the drift before it in one loop
     BRIDGE_LOW_RRSR = auto()  # ends x0 and x1, variance, log u
     BRIDGE_HIGH_RRSR = auto()
+    CLEAR_RRS = auto()  # 1 - exp(d0 d1 s) where both distances are positive, else 0
+    CORRIDOR_RRSS = auto()  # the width and -2 / variance of a step that is short for its width: three images count
+    IMAGE_RRSS = auto()  # min((d0 + s)(d1 + s) t, 0): the exponent of an image of the corridor
+    FAR_RRRS = auto()  # x + exp(s + t |d0 - d1|), s and t one behind the other: an image that has been mirrored twice
+    INSIDE_RRRS = auto()  # max(x, 0) where 0 < d0, d1 < s, else 0
+    BRIDGE_CLEAR_RRR = auto()
+    BRIDGE_CORRIDOR_RRRR = auto()
+    BRIDGE_RANGE_RRRR = auto()
+    BRIDGE_MOMENT_RRRR = auto()
+    LOOKUP_RSS = auto()  # the entry that x counts of the scalars from the one to the other
+    CORRIDOR_BY_START_RRRR = auto()
+    CORRIDOR_BY_WIDTH_RRRR = auto()
+    CORRIDOR_BY_ENDS_RRRR = auto()
+    RANGE_BY_START_RRRR = auto()
     SUM_R = auto()  # over each group of 64 lanes; the destination is the number of a sum
     SUM_RR = auto()  # of the products
 

@@ -9,11 +9,13 @@ from __future__ import annotations
 import numpy as np
 
 from mcx.machine.bits import sum_products, sum_values
+from mcx.machine.bridges import bridge_range, corridor, corridor_slope, range_by_start
 from mcx.machine.forms import Form
 from mcx.machine.jit import jit
 from mcx.machine.rows import wide_vectors
 from mcx.machine.sizes import GROUP
-from mcx.machine.special import exp_row, log_row
+from mcx.machine.special import exp_negative, exp_row, log_row
+from mcx.tape.bridges import BY_ENDS, BY_START, BY_WIDTH, CLOSEST, LEAST_EXPONENT
 
 
 @jit
@@ -29,8 +31,10 @@ def forward(registers, code, scalars, lanes, paths, sums):
             _arithmetic(form, registers[to], registers, scalars, a, b, lanes)
         elif form < Form.STEP_RSR:
             _logic(form, registers[to], registers, scalars, a, b, c, lanes)
-        elif form < Form.SUM_R:
+        elif form < Form.CLEAR_RRS:
             _model(form, registers[to], registers, scalars, a, b, c, d, lanes)
+        elif form < Form.SUM_R:
+            _watch(form, registers[to], registers, scalars, a, b, c, d, lanes)
         else:
             _sum(form, sums[:, to], registers, a, b, paths)
 
@@ -207,6 +211,87 @@ def _model(form, y, registers, scalars, a, b, c, d, lanes):
         for i in range(lanes):
             move = x1[i] - x0[i]
             y[i] = 0.5 * (x0[i] + x1[i] + np.sqrt(move * move - 2.0 * variance * log[i]))
+
+
+@jit
+def _watch(form, y, registers, scalars, a, b, c, d, lanes):
+    wide_vectors()
+    if form == Form.CLEAR_RRS:  # both sides of each `if` are computed: a branch would stop vectorisation
+        p, q, s = registers[a], registers[b], scalars[c]
+        for i in range(lanes):
+            chance = 1.0 - exp_negative(min(s * p[i] * q[i], 0.0))
+            y[i] = chance if min(p[i], q[i]) > 0.0 else 0.0
+    elif form == Form.CORRIDOR_RRSS:
+        p, q, w, s = registers[a], registers[b], scalars[c], scalars[d]
+        counts = 0  # lanes where the bridge crosses nearly all of the corridor: hardly ever any
+        for i in range(lanes):
+            low = exp_negative(min(p[i] * q[i] * s, 0.0))
+            high = exp_negative(min((p[i] - w) * (q[i] - w) * s, 0.0))
+            chance = max(1.0 - low - high, 0.0)
+            y[i] = chance if (min(p[i], q[i]) > 0.0) & (max(p[i], q[i]) < w) else 0.0
+            counts += w * (w - abs(p[i] - q[i])) * s > LEAST_EXPONENT
+        if counts > 0:
+            for i in range(lanes):
+                far = w * (w - abs(p[i] - q[i])) * s
+                if far > LEAST_EXPONENT and min(p[i], q[i]) > 0.0 and max(p[i], q[i]) < w:
+                    low = exp_negative(min(p[i] * q[i] * s, 0.0))
+                    high = exp_negative(min((p[i] - w) * (q[i] - w) * s, 0.0))
+                    y[i] = max(1.0 - low - high + exp_negative(far), 0.0)
+    elif form == Form.IMAGE_RRSS:
+        p, q, s, t = registers[a], registers[b], scalars[c], scalars[d]
+        for i in range(lanes):
+            y[i] = min((p[i] + s) * (q[i] + s) * t, 0.0)
+    elif form == Form.FAR_RRRS:  # hardly ever does it count: only where the bridge crosses nearly all of the corridor
+        x, p, q, s, t = registers[a], registers[b], registers[c], scalars[d], scalars[d + 1]
+        counts = 0
+        for i in range(lanes):
+            y[i] = x[i]
+            counts += s + t * abs(p[i] - q[i]) > LEAST_EXPONENT
+        if counts > 0:
+            for i in range(lanes):
+                exponent = s + t * abs(p[i] - q[i])
+                if exponent > LEAST_EXPONENT:
+                    y[i] = x[i] + np.exp(min(exponent, 0.0))
+    elif form == Form.INSIDE_RRRS:
+        x, p, q, s = registers[a], registers[b], registers[c], scalars[d]
+        for i in range(lanes):
+            chance = max(x[i], 0.0)
+            y[i] = chance if (min(p[i], q[i]) > 0.0) & (max(p[i], q[i]) < s) else 0.0
+    elif form == Form.BRIDGE_CLEAR_RRR:
+        p, q, v = registers[a], registers[b], registers[c]
+        for i in range(lanes):
+            y[i] = -np.expm1(-2.0 * p[i] * q[i] / v[i]) if min(p[i], q[i]) > 0.0 else 0.0
+    elif form == Form.BRIDGE_CORRIDOR_RRRR:
+        p, q, w, v = registers[a], registers[b], registers[c], registers[d]
+        for i in range(lanes):
+            y[i] = corridor(p[i], q[i], w[i], v[i])
+    elif form == Form.BRIDGE_RANGE_RRRR:
+        p, q, v, u = registers[a], registers[b], registers[c], registers[d]
+        for i in range(lanes):
+            y[i] = bridge_range(p[i], q[i], v[i], u[i])
+    elif form == Form.RANGE_BY_START_RRRR:
+        p, q, v, u = registers[a], registers[b], registers[c], registers[d]
+        for i in range(lanes):
+            y[i] = range_by_start(p[i], q[i], v[i], u[i])
+    elif Form.CORRIDOR_BY_START_RRRR <= form <= Form.CORRIDOR_BY_ENDS_RRRR:
+        p, q, w, v = registers[a], registers[b], registers[c], registers[d]
+        by = BY_START if form == Form.CORRIDOR_BY_START_RRRR else BY_WIDTH
+        by = BY_ENDS if form == Form.CORRIDOR_BY_ENDS_RRRR else by
+        for i in range(lanes):
+            y[i] = corridor_slope(by, p[i], q[i], w[i], v[i])
+    elif form == Form.BRIDGE_MOMENT_RRRR:
+        p, q, square, u = registers[a], registers[b], registers[c], registers[d]
+        for i in range(lanes):
+            d0, d1 = max(abs(p[i]), CLOSEST), max(abs(q[i]), CLOSEST)
+            half = square[i] / (d0 * d1)
+            ratio = 1.0 + half + np.sqrt(half * (half + 2.0))
+            small = u[i] * (1.0 + ratio) <= ratio
+            passed, rest = d0 if small else d0 * ratio, d1 * ratio if small else d1
+            y[i] = passed / (passed + rest)
+    elif form == Form.LOOKUP_RSS:
+        x, last = registers[a], c - b
+        for i in range(lanes):
+            y[i] = scalars[b + (int(min(x[i], 1.0 * last)) if x[i] >= 1.0 else 0)]
 
 
 @jit

@@ -13,11 +13,13 @@ from dataclasses import dataclass
 import numpy as np
 
 from mcx.machine.forms import FORMS, Form, kinds
+from mcx.tape.bridges import IMAGES, LEAST_EXPONENT, LONG_STEP
 from mcx.tape.ops import OPS, Op
 from mcx.tape.program import ALONE, Program
 
 WIDTH = 6  # form, destination, up to four operands
 _WHOLE_POWERS = range(-8, 9)  # x ** n by multiplications
+_TABLE = 3  # operands of a LOOKUP: what it counts, its first entry and its last
 
 
 @dataclass(frozen=True, slots=True)
@@ -64,7 +66,7 @@ def _join_drifts(program: Program) -> Iterator[tuple[Op | Form, int, tuple[int, 
     """The instructions, with x + m and the step that alone reads it made one: the step then loads x once; and the sums
     between them, each as soon as it can be taken."""
     lines = [
-        (Op(op), destination, tuple(operands[: OPS[Op(op)].arity]))
+        (Op(op), destination, tuple(operands[: _TABLE if op == Op.LOOKUP else OPS[Op(op)].arity]))
         for op, destination, *operands in program.code.tolist()
     ]
     sums = deque(sorted(enumerate(program.sums.tolist()), key=lambda part: part[1][2]))
@@ -174,8 +176,46 @@ class _Writer:
                     self.emit(Form.MUL_RR, product, variance, log)
                     variance, log = self.constant(1.0), product
                 self.choose(op, to, x0, x1, variance, log)
+            case Op.BRIDGE_CLEAR, d0, d1, variance if variance < 0:
+                rate = self.constant(-2.0 / self.scalars[-1 - variance] if self.scalars[-1 - variance] else -np.inf)
+                self.emit(Form.CLEAR_RRS, to, self.row(d0), self.row(d1), rate)
+            case Op.BRIDGE_CORRIDOR, d0, d1, width, variance if width < 0 and variance < 0:
+                self.corridor(to, d0, d1, width, self.scalars[-1 - variance])
             case _:
                 self.choose(op, to, *sources)
+
+    def corridor(self, to: int, d0: int, d1: int, width: int, variance: float) -> None:
+        """The images of `tape.bridges.bridge_corridor` in vector loops, as many as count for this step; where the
+        step is long for its width, or one of them is no usual number, lane by lane."""
+        w = self.scalars[-1 - width]
+        usual = np.isfinite(w) and w > 0.0 and variance > 0.0
+        if not usual or variance / (w * w) > LONG_STEP:
+            return self.choose(Op.BRIDGE_CORRIDOR, to, d0, d1, width, self.constant(variance))
+        d0, d1 = self.row(d0), self.row(d1)
+        reach, rate = 2.0 * w * w / variance, self.constant(-2.0 / variance)
+        if reach > -LEAST_EXPONENT:
+            return self.emit(Form.CORRIDOR_RRSS, to, d0, d1, width, rate)
+        exponent, image, other, total = (self.scratch() for _ in range(4))
+        numbers = sorted(range(-IMAGES, IMAGES + 1), key=abs)
+        for n in (n for n in numbers if min(n * n, (n + 1) ** 2) * reach < -LEAST_EXPONENT):
+            self.emit(Form.IMAGE_RRSS, exponent, d0, d1, self.constant(n * w), rate)
+            self.emit(Form.EXP_R, image, exponent)
+            if n == 0:
+                self.emit(Form.SUB_SR, other, self.constant(1.0), image)
+            else:
+                self.emit(Form.SUB_RR, other, total, image)
+            total, other = other, total
+        for n, sign in ((n, sign) for n in numbers if n > 0 for sign in (1, -1)):
+            if (n * n - n * (sign > 0)) * reach < -LEAST_EXPONENT:
+                first = self.constant(-n * n * reach)
+                self.constant(sign * n * reach / w)
+                self.emit(Form.FAR_RRRS, other, total, d0, d1, first)
+                total, other = other, total
+        self.emit(Form.INSIDE_RRRS, to, total, d0, d1, width)
+
+    def row(self, source: int) -> int:
+        """The row of an operand; a scalar is filled into one."""
+        return source if source >= 0 else self.filled(source)
 
     def power(self, to: int, x: int, exponent: int) -> None:
         """x ** exponent by multiplications."""

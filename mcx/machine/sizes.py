@@ -29,6 +29,18 @@ _DEAR = {
     Form.POW_RR: 15.0,
     Form.BRIDGE_LOW_RRSR: 0.8,
     Form.BRIDGE_HIGH_RRSR: 0.8,
+    Form.CLEAR_RRS: 1.0,
+    Form.CORRIDOR_RRSS: 2.0,
+    Form.BRIDGE_CLEAR_RRR: 6.0,
+    Form.BRIDGE_CORRIDOR_RRRR: 90.0,
+    Form.BRIDGE_RANGE_RRRR: 900.0,
+    Form.CORRIDOR_BY_START_RRRR: 60.0,
+    Form.CORRIDOR_BY_WIDTH_RRRR: 60.0,
+    Form.CORRIDOR_BY_ENDS_RRRR: 60.0,
+    Form.RANGE_BY_START_RRRR: 90.0,
+    Form.BRIDGE_MOMENT_RRRR: 1.9,
+    Form.FAR_RRRS: 0.4,
+    Form.LOOKUP_RSS: 1.0,
 }
 _BY_FORM = np.array([_DEAR.get(form, _USUAL) for form in Form])
 

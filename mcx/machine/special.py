@@ -56,6 +56,21 @@ def exp_row(y, x, lanes):
                 y[i] = np.exp(x[i])
 
 
+@jit
+def exp_negative(x):
+    """exp(x) for x of at most 0, to 1.5 ulp, 1e-304 where it is less: in a loop of other things it is no call."""
+    a = max(x, -_EXP_USUAL + 8.0)
+    rounded = a * _LOG2_E + _ROUNDER
+    k = rounded - _ROUNDER
+    r = (a - k * _LN2_HIGH) - k * _LN2_LOW
+    r2 = r * r
+    r4 = r2 * r2
+    low = (_A2 + r * _A3) + r2 * (_A4 + r * _A5)
+    high = (_A6 + r * _A7) + r2 * (_A8 + r * _A9) + r4 * (_A10 + r * _A11)
+    power = (1.0 + r) + r2 * (low + r4 * high)
+    return bits_to_float(float_to_bits(power) + (float_to_bits(rounded) << _MANTISSA))
+
+
 # With s = f / (2 + f): log(1 + f) = 2 s + s^3 (B0 + B1 s^2 + ...), to 1e-17 for f from 1 / sqrt(2) - 1 to
 # sqrt(2) - 1
 _B0, _B1, _B2 = 0.66666666666667333758, 0.39999999999477622411, 0.28571428721946341119

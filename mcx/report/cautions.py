@@ -27,6 +27,10 @@ def warnings(valuation: Valuation, tape: Tape, martingale: tuple[Martingale, ...
         yield (f"interrupted after {valuation.price.paths:,} of {valuation.plan.paths:,} paths; the estimate is that "
                f"of the paths so far")
     yield from valuation.plan.warnings
+    if valuation.refinement is not None and not valuation.refinement.reached:
+        yield (f"the bounds of the price are {valuation.refinement.width.value:.3g} apart by the pilot run, not the "
+               f"{valuation.refinement.target:.3g} aimed at: the steps were not refined further than to "
+               f"{valuation.refinement.steps}")
     if met is False and not valuation.interrupted:
         yield (f"the precision asked for was not reached: the 95 % half-width is {valuation.price.half_width:.3g}, "
                f"asked for was {valuation.plan.target:.3g}")
@@ -66,6 +70,7 @@ def assumptions(dated: DatedContract, market: Market, market_map: MarketMap) -> 
     if dated.calendar_version:
         yield f"holidays as listed by {dated.calendar_version}"
     paid = [due for moment in dated.moments for event in moment.events for due in event.due.values()]
+    paid += [day for hit in dated.hits for due in hit.due.values() for day in due]
     end, last = dated.last, max([dated.last, *paid], key=lambda day: day.time)
     curves = [(f"the rates of {contract.currency}", market.rates[contract.currency], last, "forward rate")]
     if contract.currency in market.funding:

@@ -6,7 +6,7 @@ from collections.abc import Iterable
 
 from mcx.checked.formula import Binary, Formula, IfElse, Number
 from mcx.checked.payoff import Action, Assign, Deliver, End, Event, Pay, Payoff
-from mcx.dates.dated_contract import DatedContract, Day
+from mcx.dates.dated_contract import DatedContract, DatedHit, Day
 from mcx.report.results import EventLine
 from mcx.report.settled import Settled
 from mcx.report.wording import MOST_LISTED, Words, counted, days, figure, joined, period
@@ -27,8 +27,9 @@ def event_line(event: Event, dated: DatedContract, words: Words, settled: Settle
     on = _days_of(event, dated)
     name = event_label(event, dated.contract.payoff)
     side = settled.side(event)
-    if not on:
-        return EventLine(name, f"Never in this contract: {_schedule(event)} has no such date.", ())
+    if not on and _hit(event, dated) is None:
+        why = f"{_schedule(event)} has no such date" if event.at.part != "once" else "its terms rule it out"
+        return EventLine(name, f"Never in this contract: {why}.", ())
     then = _doing(event.then, event, dated, words, settled)
     otherwise = _doing(event.otherwise, event, dated, words, settled)
     when = _when(event, on, dated)
@@ -46,6 +47,10 @@ def _days_of(event: Event, dated: DatedContract) -> list[Day]:
     return [each.occasion.day for moment in dated.moments for each in moment.events if each.event is event]
 
 
+def _hit(event: Event, dated: DatedContract) -> DatedHit | None:
+    return next((hit for hit in dated.hits if hit.event is event), None)
+
+
 def _schedule(event: Event) -> str:
     part = f".{event.at.part}" if event.at.part else ""
     since = f" from {event.since} on" if event.since else ""
@@ -55,8 +60,12 @@ def _schedule(event: Event) -> str:
 
 def _when(event: Event, on: list[Day], dated: DatedContract) -> str:
     """'On each of 9 dates of observations from first_call on (…)', 'On expiry (2027-12-01)'."""
+    hit = _hit(event, dated)
+    if hit is not None:
+        return (f"At the moment at which {event.at.name} first holds, at any time from {hit.watch.start} to "
+                f"{hit.watch.end}")
     if event.at.part == "once":
-        return f"Once {event.at.name} first holds"
+        return f"On the first of {counted(len(on), 'date')} on which {event.at.name} holds ({days(on)})"
     narrowed = f" from {event.since} on" if event.since in dated.schedules else ""
     narrowed += f" until {event.until}" if event.until in dated.schedules else ""
     if len(on) == 1:
@@ -112,13 +121,13 @@ def _amount(amount: Formula, dated: DatedContract, words: Words) -> str:
 
 def _due(pay: Pay, event: Event, dated: DatedContract) -> str:
     """When an amount is paid, in words."""
-    settlement = dated.contract.settlement
+    settlement, hit = dated.contract.settlement, _hit(event, dated)
     if pay.due in dated.schedules:
         listed = dated.schedules[pay.due]
         return f"due on {pay.due} ({listed[0]})" if len(listed) == 1 else f"due on the same date of {pay.due}"
     if pay.due == "same day" or settlement is None or settlement.count == 0:
-        return "due the same day"
-    return f"due {period(settlement)} later"
+        return "due at that moment" if hit and dated.contract.textbook else "due the same day"
+    return f"due {period(settlement)} {'after the day of the hit' if hit else 'later'}"
 
 
 def _at_the_end(event: Event, dated: DatedContract, settled: Settled) -> Iterable[str]:

@@ -17,7 +17,7 @@ from mcx.dates.dated_contract import DatedContract, Day
 from mcx.faults import Fault, Place
 from mcx.report.results import Met, PathResult, Payment
 from mcx.report.wording import joined
-from mcx.tape.formulas import figure
+from mcx.tape.formulas import figure, fixed_values
 from mcx.tape.interpret import interpret, outputs
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
@@ -38,7 +38,10 @@ def run_levels(
     tape = drop_dead_code(tape)
     reader = _Reader(dated, levels)
     wanted = {(step.op, step.payload): None for step in tape.instructions if isinstance(step.payload, LevelKey)}
-    read = {(op, key): reader.level(op, key) for op, key in wanted}
+    read = {(op, key): reader.level(op, key) for op, key in wanted if op is not Op.MOMENT}
+    fixed = fixed_values(tape, dated.contract)
+    read |= {(step.op, step.payload): reader.moment(step.payload, fixed[step.operands[0]])
+             for step in tape.instructions if step.op is Op.MOMENT}
     due = tuple(leaf for leaf in tape.leaves if leaf.kind is LeafKind.DISCOUNT)
     values = interpret(tape, [_leaf(leaf, due, dated) for leaf in tape.leaves], levels=read)
     found = {name: np.broadcast_to(value, (max(len(due), 1),)) for name, value in outputs(tape, values).items()}
@@ -75,6 +78,16 @@ class _Reader:
         if not found:
             return np.nan
         return {Op.LEVEL: max, Op.LOW: min, Op.HIGH: max}[op](level for _, level in found)
+
+    def moment(self, key: LevelKey, barrier: float) -> float:
+        """Which part of a stretch has passed on the first given date with a level beyond the barrier; a textbook
+        contract, which has no days, pays at the stretch's end."""
+        found = [(time, level) for time, level in self.given[key.asset]
+                 if key.start - SAME_TIME <= time <= key.time + SAME_TIME]
+        beyond = [time for time, level in found[1:] if (level - barrier) * (found[0][1] - barrier) <= 0.0]
+        if self.dated.contract.textbook or not beyond or beyond[0] > key.time - SAME_TIME:
+            return 1.0
+        return (beyond[0] - key.start - SAME_TIME) / (key.time - key.start)  # a day ends with its own level
 
     def missing_before(self, ended: str) -> bool:
         """Whether a level is missing that counts: after the contract has ended none does.
@@ -119,6 +132,7 @@ def day_of(time: float, dated: DatedContract) -> str:
     known = [moment.day for moment in dated.moments]
     known += [day for watch in dated.watches for day in (watch.start, watch.end)]
     known += [due for moment in dated.moments for event in moment.events for due in event.due.values()]
+    known += [day for hit in dated.hits for days in (hit.days, *hit.due.values()) for day in days]
     near = min(known, key=lambda day: abs(day.time - time))
     if abs(near.time - time) <= SAME_TIME or near.date is None:
         return str(near if abs(near.time - time) <= SAME_TIME else Day(time))

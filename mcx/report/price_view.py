@@ -82,10 +82,24 @@ def _facts(result: PriceResult, scale: Scale) -> Iterator[tuple[str, str]]:
         yield "ended on", result.ended
     yield "standard error", f"{scale.show(result.standard_error, places)}{scale.sign}"
     yield "95 % interval", f"{low} to {high}{scale.sign}"
+    if result.bracket:
+        yield "bounds", _bounds(result, scale)
     yield "paths", f"{result.paths:,} in {result.seconds:.2f} s; asked for: {result.planned.asked}"
     yield "seed", f"{result.seed}; variance reduction: {result.reduction}"
     life = decimals(result.expected_life_standard_error, 2, 2)
     yield "expected life", f"{fixed(result.expected_life, min(life, 4))} years (risk-neutral)"
+
+
+def _bounds(result: PriceResult, scale: Scale) -> str:
+    """What is said of a price between bounds."""
+    bracket = result.bracket
+    places = scale.places(max(bracket.width, result.standard_error))
+    low, high, width, target = (scale.show(number, places) for number in
+                                (bracket.lower, bracket.upper, bracket.width, bracket.target))
+    close = "closer than" if bracket.reached else "not closer than"
+    return (f"{low} to {high}{scale.sign}: the price is the middle; how several assets are watched together is known "
+            f"between bounds only, {width}{scale.sign} apart, {close} the {target}{scale.sign} aimed at, with "
+            f"{bracket.steps} steps instead of {bracket.unrefined} ({bracket.cost:.1f} times the cost of a path)")
 
 
 def _amounts(amounts: Sequence[Amount], result: PriceResult, scale: Scale) -> Iterator[tuple[str, ...]]:

@@ -37,10 +37,13 @@ HOW = {"average": "the average of {}", "total": "the sum of {}", "product": "the
        "ever": "whether ever {}", "always": "whether always {}"}
 CONVERSIONS = {"quanto": "its level counts as quoted, at a fixed rate of exchange (quanto)",
                "composite": "its level is converted at the rate of exchange of the same day (composite)"}
-LAWS = {"exact": "the level between two dates is a Brownian bridge in its log, whose extreme has a known law",
+LAWS = {"exact": "the level between two dates is a Brownian bridge in its log, whose extremes have a known law",
         "nearly exact": "the same law for the level without its cash dividends to come, which enter at their mean over "
                         "each step between two dates",
+        "bracketed": "of each asset the law of a bridge between two dates is known, of several together only bounds; "
+                     "the price is the middle of the two, and how far they are apart stands beside it",
         "unread": "nothing depends on it"}
+ENTERS = {False: "payments weigh the chance that it is reached", True: "drawn on each path"}
 
 
 def readback(dated: DatedContract, market: Market | None, path: PathResult | None = None) -> Readback:
@@ -151,8 +154,10 @@ def _continuous(watch: Watch, wanted: bool, notes: dict, unrolled: Unrolled) -> 
     if unrolled.faults:
         return WatchLine(name, when, "refused", "; ".join(map(str, unrolled.faults)))
     note = notes[name]
-    side = {"low": f"by the lowest level of {note.asset}: ", "high": f"by the highest level of {note.asset}: "}
-    return WatchLine(name, when, note.law, side.get(note.side, "") + LAWS[note.law])
+    if note.law == "unread":
+        return WatchLine(name, when, note.law, LAWS[note.law])
+    by = joined(f"the {side}est level of {asset}" for asset, side in note.sides)
+    return WatchLine(name, when, note.law, f"by {by}: {LAWS[note.law]}; {ENTERS[note.drawn]}")
 
 
 def _is_watch(running: Running, dated: DatedContract) -> bool:

@@ -124,10 +124,45 @@ class Planned(Result):
 
 
 @dataclass(frozen=True, slots=True)
+class Width(Result):
+    """By how much the upper bound of another result (a leg, a probability) lies above the lower one."""
+
+    name: str
+    width: float
+
+
+@dataclass(frozen=True, slots=True)
+class Bracket(Result):
+    """The bounds of a price where several assets are watched together, so that their joint law within a step is not
+    known: `price` is the middle, and so are legs and probabilities.
+
+    lower, upper  bounds of the price, on the same paths; `width` is their distance, with its sampling error
+    target        how close they should be: the 95 % half-width that was asked for, or that of the paths asked for
+    reached       whether the pilot run found them so close
+    pieces        into how many parts at least the time that is watched was cut; `steps` and `unrefined` are the steps
+                  of the simulation with and without that, `cost` the cost of a path over one without
+    others        the widths of legs, parts and probabilities
+    """
+
+    lower: float
+    upper: float
+    width: float
+    width_standard_error: float
+    target: float
+    reached: bool
+    pieces: int
+    steps: int
+    unrefined: int
+    cost: float
+    others: tuple[Width, ...]
+
+
+@dataclass(frozen=True, slots=True)
 class PriceResult(Result):
     """What a contract is worth: `mcx price`.
 
-    `notional` or `units` is None. `valuation` is None for textbook markets. `ends` holds how often the contract ended
+    `notional` or `units` is None. `bracket` is None but where the price is the middle of two bounds; `interval95` is
+    about sampling alone. `valuation` is None for textbook markets. `ends` holds how often the contract ended
     early on each date, `reached_maturity` how often it did not, and `expected_life` the years to the payment that ends
     it. `owed` are amounts that fixings have settled and that are not yet paid; they are part of the price, which is dirty:
     `accrued` is the interest of certain coupons in their running period, and `clean` the price less that. `ended` is the
@@ -145,6 +180,7 @@ class PriceResult(Result):
     price: float
     standard_error: float
     interval95: tuple[float, float]
+    bracket: Bracket | None
     value: float
     value_standard_error: float
     paths: int
@@ -226,7 +262,8 @@ class DateLine(Result):
 
 @dataclass(frozen=True, slots=True)
 class WatchLine(Result):
-    """How something is watched. `law`: 'exact', 'refused' or 'unread' (nothing depends on it)."""
+    """How something is watched. `law`: 'exact', 'bracketed' (several assets: between two bounds), 'refused' or 'unread'
+    (nothing depends on it)."""
 
     name: str
     when: str

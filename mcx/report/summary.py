@@ -11,6 +11,7 @@ from mcx.report.cautions import assumptions, cautions, limits, warnings
 from mcx.report.given_path import day_of
 from mcx.report.results import (
     Amount,
+    Bracket,
     Checks,
     Condition,
     Likelihood,
@@ -18,6 +19,7 @@ from mcx.report.results import (
     Planned,
     PriceResult,
     Stage,
+    Width,
 )
 from mcx.report.state import accrued, owed, standing
 
@@ -44,6 +46,7 @@ def price_result(ready: Ready, market: Market, valuation: Valuation) -> PriceRes
         price=price.value,
         standard_error=price.standard_error,
         interval95=price.interval95,
+        bracket=_bracket(valuation),
         value=price.value * contract.size,
         value_standard_error=price.standard_error * contract.size,
         paths=price.paths,
@@ -69,6 +72,21 @@ def price_result(ready: Ready, market: Market, valuation: Valuation) -> PriceRes
         limits=tuple(limits(dated)),
         cautions=tuple(cautions(dated, bool(conditions or ends))),
         calendar_version=dated.calendar_version,
+    )
+
+
+def _bracket(valuation: Valuation) -> Bracket | None:
+    """The bounds of the price, where it has any."""
+    taken = valuation.refinement
+    if taken is None:
+        return None
+    widths = {output.subject: estimate for output, estimate in valuation.of("gap")}
+    price, width = valuation.price, widths.pop("price", Estimate(0.0, 0.0, valuation.price.paths))
+    return Bracket(
+        lower=price.value - 0.5 * width.value, upper=price.value + 0.5 * width.value, width=width.value,
+        width_standard_error=width.standard_error, target=taken.target, reached=taken.reached, pieces=taken.pieces,
+        steps=taken.steps, unrefined=taken.unrefined, cost=taken.cost,
+        others=tuple(Width(name, estimate.value) for name, estimate in widths.items()),
     )
 
 

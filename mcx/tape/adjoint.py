@@ -16,7 +16,7 @@ from typing import TypeAlias
 
 import numpy as np
 
-from mcx.tape.adjoint_rules import ADJOINTS, At, Numbers, Product
+from mcx.tape.adjoint_rules import At, Numbers, Product, rules_of
 from mcx.tape.builder import Builder
 from mcx.tape.ops import OPS, Op
 from mcx.tape.passes import drop_dead_code
@@ -26,7 +26,8 @@ from mcx.tape.registers import uniform_values
 Wanted: TypeAlias = Callable[[Leaf], bool]
 Gradient: TypeAlias = dict[int, list[Product]]  # by value that is the same on every path: products that add up
 
-MODEL = frozenset({Op.STEP, Op.BRIDGE_LOW, Op.BRIDGE_HIGH})  # where a path is drawn: logs of levels and of extremes
+# where a path is drawn: logs of levels and of extremes
+MODEL = frozenset({Op.STEP, Op.BRIDGE_LOW, Op.BRIDGE_HIGH, Op.BRIDGE_RANGE})
 
 
 def of_the_market(leaf: Leaf) -> bool:
@@ -62,6 +63,27 @@ def on_paths(builder: Builder, parts: Iterable[Product]) -> int:
     return builder.constant(0.0) if total is None else total
 
 
+def along(builder: Builder, gradient: Gradient, leaf: int) -> int:
+    """The derivative by a leaf as a value of the tape, on each path: what the gradient says of values that are the same
+    on every path, each times its own derivative by the leaf."""
+    tangents: dict[int, int | None] = {leaf: builder.constant(1.0)}
+
+    def tangent(value: int) -> int | None:
+        if value not in tangents:
+            step, total = builder.instructions[value], None
+            for operand, rule in zip(step.operands, rules_of(step.op, len(step.operands)), strict=True):
+                if rule and (inner := tangent(operand)) is not None:
+                    part = rule(At(builder, step.operands, value, inner, True))
+                    total = _added(builder, total, part)
+            tangents[value] = total
+        return tangents[value]
+
+    moved = [(part, factor) for value, parts in gradient.items() if (factor := tangent(value)) is not None
+             for part in parts]
+    return on_paths(builder, [Product(factor if part.right is None else builder.emit(Op.MUL, part.right, factor), part.left)
+                              for part, factor in moved])
+
+
 def sweep(
     builder: Builder, seeds: Mapping[int, int], wanted: Wanted = of_the_market, held: Collection[int] = ()
 ) -> Gradient:
@@ -90,7 +112,7 @@ def sweep(
             continue
         step, bar = builder.instructions[number], bars.pop(number)
         at = At(builder, step.operands, number, bar, traits.risky[number])
-        for operand, rule in zip(step.operands, ADJOINTS[step.op], strict=True):
+        for operand, rule in zip(step.operands, rules_of(step.op, len(step.operands)), strict=True):
             if rule and traits.active[operand]:
                 give(operand, rule(at))
     return gradient
@@ -131,7 +153,8 @@ class _Traits:
     def _add(self, step: Instruction, moves: bool, wanted: Wanted) -> None:
         op, operands = step.op, step.operands
         if operands:
-            follows = any(rule and self.active[k] for k, rule in zip(operands, ADJOINTS[op], strict=True))
+            rules = rules_of(op, len(operands))
+            follows = any(rule and self.active[k] for k, rule in zip(operands, rules, strict=True))
         else:
             follows = op is Op.LEAF and wanted(step.payload)
         self.active.append(moves and follows)
@@ -188,7 +211,7 @@ def leaf_sums(
             found[..., column[step.payload]] += bar
             continue
         at = At(Numbers(), tuple(known[k] for k in step.operands), known[number], bar, risky=True)
-        for operand, rule in zip(step.operands, ADJOINTS.get(step.op, ()), strict=True):
+        for operand, rule in zip(step.operands, rules_of(step.op, len(step.operands)), strict=True):
             if rule:
                 part = rule(at)
                 bars[operand] = bars.get(operand, 0.0) + (part.left if part.right is None else part.left * part.right)

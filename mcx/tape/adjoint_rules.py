@@ -159,6 +159,85 @@ def _bridge_variance(at: At) -> Product:
     return at.minus(at.emit(Op.MUL, _half_over_root(at), at.emit(Op.LOG, at.operands[3])))
 
 
+def _clear(at: At) -> Any:
+    """The adjoint times 2 exp(-2 d0 d1 / v) / v where neither end has reached the barrier and there is a variance, else
+    0: of the chance 1 - exp(-2 d0 d1 / v)."""
+    d0, d1, variance = at.operands
+    inside = at.emit(Op.LT, at.constant(0.0), at.emit(Op.MIN, at.emit(Op.MIN, d0, d1), variance))
+    rest = at.emit(Op.SUB, at.constant(1.0), at.value)
+    rest = at.emit(Op.MUL, at.emit(Op.ADD, rest, rest), at.bar)
+    return at.where(inside, at.emit(Op.DIV, rest, variance))
+
+
+def _clear_end(other: int) -> Rule:
+    return lambda at: Product(_clear(at), at.operands[other])
+
+
+def _clear_variance(at: At) -> Product:
+    d0, d1, variance = at.operands
+    divisor = at.emit(Op.MAX, variance, at.constant(np.finfo(float).tiny))
+    return at.minus(at.emit(Op.DIV, at.emit(Op.MUL, _clear(at), at.emit(Op.MUL, d0, d1)), divisor))
+
+
+def _by_start(at: At, swapped: bool = False) -> Any:
+    d0, d1, *others = at.operands
+    ends = (d1, d0) if swapped else (d0, d1)
+    return at.emit(Op.CORRIDOR_BY_START, *ends, *others)
+
+
+def _corridor_variance(at: At) -> Any:
+    """The derivative by the variance from the others: the chance is the same in any unit of length."""
+    d0, d1, width, variance = at.operands
+    total = at.emit(Op.MUL, d0, _by_start(at))
+    total = at.emit(Op.STEP, total, d1, _by_start(at, swapped=True))
+    by_width = at.where(at.emit(Op.LT, width, at.constant(np.inf)), width)  # an upper barrier that is none
+    total = at.emit(Op.STEP, total, by_width, at.emit(Op.CORRIDOR_BY_WIDTH, *at.operands))
+    return at.emit(Op.DIV, total, _twice_negative(at, variance))
+
+
+def _twice_negative(at: At, variance: Any) -> Any:
+    """-2 times a variance, not 0: what it divides is 0 where there is none."""
+    return at.emit(Op.MUL, at.emit(Op.MAX, variance, at.constant(np.finfo(float).tiny)), at.constant(-2.0))
+
+
+def _bend_by_start(at: At) -> Any:
+    """The second derivative of the corridor's chance by d0: the density of paths that stay inside solves the heat
+    equation, so that it follows from the first ones, f00 = 2 fv - 2 f0 (d1 - d0) / v. Here `at` is CORRIDOR_BY_START."""
+    d0, d1, _, variance = at.operands
+    drift = at.emit(Op.DIV, at.emit(Op.MUL, at.value, at.emit(Op.SUB, d1, d0)), _twice_negative(at, variance))
+    half = at.emit(Op.STEP, _corridor_variance(at), at.constant(2.0), drift)
+    return at.emit(Op.ADD, half, half)
+
+
+def _range_start(at: At, swapped: bool = False) -> Any:
+    d0, d1, variance, _ = at.operands
+    ends = (d1, d0) if swapped else (d0, d1)
+    return at.emit(Op.RANGE_BY_START, *ends, variance, at.value)
+
+
+def _range_variance(at: At) -> Product:
+    """From the other derivatives: a range is a length, d0 r0 + d1 r1 + 2 v rv = r."""
+    d0, d1, variance, _ = at.operands
+    rest = at.emit(Op.SUB, at.emit(Op.MUL, d0, _range_start(at)), at.value)
+    rest = at.emit(Op.STEP, rest, d1, _range_start(at, swapped=True))
+    slope = at.emit(Op.DIV, rest, _twice_negative(at, variance))
+    return at.times(at.where(at.emit(Op.LT, at.constant(0.0), variance), slope))
+
+
+def _entry(number: int, last: int) -> Rule:
+    """The adjoint of an entry of a table: where x counts it."""
+    def rule(at: At) -> Product:
+        x, constant = at.operands[0], at.constant
+        found = at.bar
+        if number < last:
+            found = at.where(at.emit(Op.LT, x, constant(number + 1.0)), found)
+        if number > 0:
+            found = at.emit(Op.SELECT, at.emit(Op.LT, x, constant(float(number))), constant(0.0), found)
+        return Product(found)
+
+    return rule
+
+
 _BRIDGE = (_bridge_end(Op.SUB), _bridge_end(Op.ADD), _bridge_variance, None)  # of u: nothing moves the draws
 
 ADJOINTS: dict[Op, tuple[Rule | None, ...]] = {
@@ -188,4 +267,37 @@ ADJOINTS: dict[Op, tuple[Rule | None, ...]] = {
     Op.STEP: (_whole, lambda at: at.times(at.operands[2]), lambda at: at.times(at.operands[1])),
     Op.BRIDGE_LOW: _BRIDGE,
     Op.BRIDGE_HIGH: _BRIDGE,
+    # continuous watching; the moment of a hit is drawn by a choice between two roots, so nothing flows through it
+    Op.BRIDGE_CLEAR: (_clear_end(1), _clear_end(0), _clear_variance),
+    Op.BRIDGE_CORRIDOR: (
+        lambda at: at.times(_by_start(at)),
+        lambda at: at.times(_by_start(at, swapped=True)),
+        lambda at: at.times(at.emit(Op.CORRIDOR_BY_WIDTH, *at.operands)),
+        lambda at: at.times(_corridor_variance(at)),
+    ),
+    Op.BRIDGE_RANGE: (
+        lambda at: at.times(_range_start(at)),
+        lambda at: at.times(_range_start(at, swapped=True)),
+        _range_variance,
+        None,
+    ),
+    Op.BRIDGE_MOMENT: (None, None, None, None),
+    # second derivatives, which are taken by the spots alone: no width and no variance depends on them
+    Op.CORRIDOR_BY_START: (
+        lambda at: at.times(_bend_by_start(at)),
+        lambda at: at.times(at.emit(Op.CORRIDOR_BY_ENDS, *at.operands)),
+        None,
+        None,
+    ),
+    Op.CORRIDOR_BY_WIDTH: (None, None, None, None),
+    Op.CORRIDOR_BY_ENDS: (None, None, None, None),
+    Op.RANGE_BY_START: (None, None, None, None),
 }
+
+
+def rules_of(op: Op, operands: int) -> tuple[Rule | None, ...]:
+    """The rule of each operand; those of a LOOKUP are one for each entry of its table, and none for what counts them: it
+    jumps there."""
+    if op is Op.LOOKUP:
+        return (None, *(_entry(number, operands - 2) for number in range(operands - 1)))
+    return ADJOINTS.get(op, (None,) * operands)

@@ -7,7 +7,7 @@ from collections.abc import Iterable
 from mcx.faults import Place
 from mcx.tape.algebra import SIMPLER
 from mcx.tape.ops import Op
-from mcx.tape.program import Instruction, Leaf, LevelKey, Output, Sum, Tape
+from mcx.tape.program import Instruction, Leaf, LevelKey, Output, Sum, Tape, Unhit
 from mcx.tape.rules import evaluate
 
 COMMUTATIVE = frozenset({Op.ADD, Op.MUL, Op.MIN, Op.MAX, Op.EQ, Op.NE, Op.AND, Op.OR})
@@ -65,6 +65,10 @@ class Builder:
             self._numbers[key] = found
         return found
 
+    def keyed(self, op: Op, operands: tuple[int, ...], payload: LevelKey | Unhit, place: Place | None = None) -> int:
+        """The value of an operation that has both operands and a payload."""
+        return self._once((op, operands, payload), op, operands, payload, place)
+
     def fold(self, op: Op, values: Iterable[int], place: Place | None = None) -> int:
         """One value out of several (at least one), two by two from the left: sums, products, extremes, and, or."""
         first, *rest = values
@@ -78,6 +82,8 @@ class Builder:
             return self.constant(step.payload)
         if not operands:
             return self.input(step.op, step.payload, step.place)
+        if step.payload is not None:
+            return self.keyed(step.op, operands, step.payload, step.place)
         return self.emit(step.op, *operands, place=step.place)
 
     def tape(self, outputs: Iterable[Output], normals: int = 0, uniforms: int = 0, sums: Iterable[Sum] = ()) -> Tape:

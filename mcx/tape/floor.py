@@ -9,12 +9,13 @@ note that is called early is not thought to lose the redemption that it no longe
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Iterable, Iterator
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass
 from itertools import groupby
 
 from mcx.dates.dated_contract import DatedContract, Day
 from mcx.tape.builder import Builder
+from mcx.tape.hits import Span
 from mcx.tape.intervals import NO, YES, Case, Intervals, Interval
 from mcx.tape.ledger import Payment
 from mcx.tape.unroll import walked
@@ -40,7 +41,7 @@ class Stage:
     """The events of one day on the paths on which the contract has lived until then: if it goes on after it, and if it
     ends with it. None where no path does."""
 
-    day: Day
+    day: Day | Span
     goes_on: tuple[Choice, ...] | None
     ends: tuple[Choice, ...] | None = None
 
@@ -51,16 +52,17 @@ class Extreme:
     or so much ends early, None where it runs to the end."""
 
     value: float
-    ends: Day | None
+    ends: Day | Span | None
 
 
 @dataclass(frozen=True, slots=True)
 class PaymentRange:
-    """A payment with the least and the most that it can be on any path, not discounted; 0 where it may not be owed."""
+    """A payment with the least and the most that it can be on any path, not discounted; 0 where it may not be owed.
+    `due` is the last day on which it may fall due."""
 
     leg: str
     part: str
-    decided: Day
+    decided: Day | Span
     due: Day
     least: float
     most: float
@@ -85,7 +87,7 @@ class Certain:
         """The extreme of each way that the contract can go; `end` is 0 for the lower ends of amounts, else 1."""
 
         def of(choices: Iterable[Choice]) -> float:
-            return math.fsum(pick(sum(owed.amount[end] * discount(owed.payment.due.time) for owed in outcome)
+            return math.fsum(pick(sum(pick(owed.amount[end] * discount(time) for time in owed.payment.due.times) for owed in outcome)
                                   for outcome in choice) for choice in choices)
 
         total = 0.0
@@ -111,7 +113,7 @@ class Certain:
                                  for choice in way) for way in ways)
                 found[payment] = amounts if sure and always else [*amounts, NO]
             sure = sure and stage.ends is None
-        return tuple(PaymentRange(one.leg, one.part, one.decided, one.due, min(low for low, _ in amounts),
+        return tuple(PaymentRange(one.leg, one.part, one.decided, one.due.latest, min(low for low, _ in amounts),
                                   max(high for _, high in amounts)) for one, amounts in found.items())
 
 
@@ -119,16 +121,16 @@ def _extreme(ways: Iterable[Extreme], pick: Callable) -> Extreme:
     return pick(ways, key=lambda way: way.value)
 
 
-def certain(dated: DatedContract) -> Certain:
-    """What is certain of the payments of a contract that can be unrolled, by interval analysis of its tape. The bounds
-    are sure; they may be wider than what paths reach."""
+def certain(dated: DatedContract, nodes: Sequence[float]) -> Certain:
+    """What is certain of the payments of a contract that can be unrolled, by interval analysis of its tape; `nodes` as
+    for `unroll`. The bounds are sure; they may be wider than what paths reach."""
     builder = Builder()
-    walk = walked(dated, builder)
+    walk = walked(dated, builder, nodes)
     assert not walk.faults, "the contract can be unrolled"
     case: Case | None = Case(Intervals(builder.tape(()), dated.contract))
     decided = {day: list(owed) for day, owed in groupby(walk.payments, key=lambda payment: payment.decided)}
     stages = []
-    for day in sorted({*decided, *walk.ends}, key=lambda day: day.time):
+    for day in sorted({*decided, *walk.ends}, key=lambda day: (day.time, isinstance(day, Day))):  # hits come before
         payments = decided.get(day, [])
         if day not in walk.ends:
             stages.append(Stage(day, _choices(payments, case)))

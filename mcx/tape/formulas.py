@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import TypeAlias
 
 from mcx.checked.contract import Contract, Figures, LevelFixing, Word
@@ -31,7 +31,7 @@ from mcx.dates.dated_contract import Occasion
 from mcx.faults import Fault, Place
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
-from mcx.tape.program import Leaf, LeafKind
+from mcx.tape.program import Leaf, LeafKind, Tape
 from mcx.tape.rules import evaluate
 
 Values: TypeAlias = tuple[int, ...]
@@ -48,12 +48,18 @@ class Unreadable(Exception):
 @dataclass(frozen=True, slots=True)
 class Scene:
     """What names mean while one formula is read: the spots, the date, the running values, and what each `previous`
-    of this running value or event remembers (by identity of its node; None on the first date)."""
+    of this running value or event remembers (by identity of its node; None on the first date).
+
+    At the moment of a hit there is no date: `moment` is the years from the start as a value of the tape, `part` which
+    part of the stretch has passed, and `known` the levels of single assets."""
 
     spot: Callable[[Name], Values]
     running: Callable[[Name], Values]
     occasion: Occasion | None = None
     remembered: dict[int, Values] | None = None
+    moment: int | None = None
+    part: int | None = None
+    known: dict[int, int] = field(default_factory=dict)
 
 
 ARITHMETIC = {"+": Op.ADD, "-": Op.SUB, "*": Op.MUL, "/": Op.DIV, "**": Op.POW}
@@ -99,6 +105,8 @@ class Formulas:
             case Call():
                 arguments = [self.read(argument, scene) for argument in formula.arguments]
                 return self._call(formula, arguments)
+            case OfAsset(operand=Name(name="spot")) if self.asset_number(formula) in scene.known:
+                return (scene.known[self.asset_number(formula)],)
             case OfAsset():
                 operand = self.read(formula.operand, scene)
                 return operand if len(operand) == 1 else (operand[self.asset_number(formula)],)
@@ -155,7 +163,7 @@ class Formulas:
                 self._fixed[value] = figure(self.contract, step.payload)
             else:
                 operands = [self.fixed(operand) for operand in step.operands]
-                known = operands and None not in operands
+                known = operands and None not in operands and step.payload is None
                 self._fixed[value] = float(evaluate(step.op, *operands)) if known else None
         return self._fixed[value]
 
@@ -189,6 +197,8 @@ class Formulas:
             return scene.running(formula)
         if name in self.lets:
             return self.read(self.lets[name], scene)
+        if name == "years" and scene.moment is not None:
+            return (scene.moment,)
         if name not in DATE_NAMES or name in self._per:
             return self.term(name, formula.place, scene.occasion)
         known = getattr(scene.occasion, name) if scene.occasion else math.nan
@@ -264,6 +274,21 @@ class Formulas:
                 values.append(self.builder.emit(second, chosen, other, place=formula.place))
                 chosen = self.builder.emit(first, chosen, other, place=formula.place)
         return chosen
+
+
+def fixed_values(tape: Tape, contract: Contract) -> list[float | None]:
+    """For each value of a tape the number that it is in this contract whatever the market, or None."""
+    known: list[float | None] = []
+    for step in tape.instructions:
+        if step.op is Op.CONSTANT:
+            known.append(step.payload)
+        elif step.op is Op.LEAF and step.payload.kind is LeafKind.TERM:
+            known.append(figure(contract, step.payload))
+        else:
+            operands = [known[k] for k in step.operands]
+            computed = operands and None not in operands and step.payload is None
+            known.append(float(evaluate(step.op, *operands)) if computed else None)
+    return known
 
 
 def figure(contract: Contract, leaf: Leaf) -> float:

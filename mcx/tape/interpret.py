@@ -25,7 +25,8 @@ def interpret(
     """Every value of the tape, in order: shape (paths,), or a scalar where it is the same on every path.
 
     leaf_values (leaves,) in the order of `tape.leaves`; normals (tape.normals, paths); uniforms (tape.uniforms, paths);
-    levels: what LEVEL, LOW and HIGH read, keyed by operation and key, for a tape whose levels are not expanded yet.
+    levels: what LEVEL, LOW, HIGH and MOMENT read, keyed by operation and key, for a tape whose levels are not expanded
+    yet.
     """
     leaves = dict(zip(tape.leaves, leaf_values, strict=True))
     values: list[Value] = []
@@ -35,7 +36,7 @@ def interpret(
                 value = np.float64(step.payload)
             case Op.LEAF:
                 value = np.float64(leaves[step.payload])
-            case Op.LEVEL | Op.LOW | Op.HIGH:
+            case Op.LEVEL | Op.LOW | Op.HIGH | Op.MOMENT:
                 value = np.asarray(levels[step.op, step.payload], dtype=np.float64)[()]
             case Op.NORMAL:
                 value = normals[step.payload]

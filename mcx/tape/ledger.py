@@ -8,6 +8,7 @@ from mcx.checked.payoff import Pay, Payoff
 from mcx.dates.dated_contract import Day
 from mcx.faults import Place
 from mcx.tape.builder import Builder
+from mcx.tape.hits import Due, Span
 from mcx.tape.ops import Op
 from mcx.tape.program import Output
 
@@ -17,14 +18,15 @@ UNSORTED = "unsorted"
 
 @dataclass(frozen=True, slots=True)
 class Payment:
-    """One amount that may be owed: `amount`, not discounted, is paid on `due` where `flag`; both are values of the
-    tape. `decided` is the day of the event that stands at `event` in the definition."""
+    """One amount that may be owed: `amount`, not discounted, is paid when `due` says where `flag`; both are values of
+    the tape. `decided` is the day of the event that stands at `event` in the definition, or the days between which its
+    hit comes."""
 
     leg: str
     part: str
     event: Place
-    decided: Day
-    due: Day
+    decided: Day | Span
+    due: Due
     flag: int
     amount: int
 
@@ -36,9 +38,9 @@ class Ledger:
     builder: Builder
     legs: dict[str, int] = field(default_factory=dict)
     parts: dict[str, int] = field(default_factory=dict)
-    conditions: dict[str, dict[Day, int]] = field(default_factory=dict)
-    ends: dict[Day, int] = field(default_factory=dict)
-    lives: list[tuple[int, float]] = field(default_factory=list)  # flag of the ending, time of its payment
+    conditions: dict[str, dict[Day | Span, int]] = field(default_factory=dict)
+    ends: dict[Day | Span, int] = field(default_factory=dict)
+    lives: list[tuple[int, int]] = field(default_factory=list)  # flag of the ending, time of its payment
     last_payment: float = 0.0
     payments: list[Payment] = field(default_factory=list)
     owed: int | None = None  # what is fixed already and not yet paid
@@ -57,7 +59,7 @@ class Ledger:
 
     def pay(self, pay: Pay, present_value: int, payment: Payment, settled: bool = False) -> None:
         """Enter a payment; `settled`: it is fixed already."""
-        add, due = self.builder.emit, payment.due
+        add = self.builder.emit
         self.payments.append(payment)
         if settled:
             self.owed = present_value if self.owed is None else add(Op.ADD, self.owed, present_value, place=pay.place)
@@ -65,17 +67,18 @@ class Ledger:
         if self.parts:
             part = pay.part or UNSORTED
             self.parts[part] = add(Op.ADD, self.parts[part], present_value, place=pay.place)
-        self.last_payment = max(self.last_payment, due.time)
+        self.last_payment = max(self.last_payment, payment.due.latest.time)
 
-    def happened(self, name: str, day: Day, flag: int) -> None:
+    def happened(self, name: str, day: Day | Span, flag: int) -> None:
         self._join(self.conditions[name], day, flag)
 
-    def ended(self, day: Day, flag: int, payment: float) -> None:
-        """The contract ended on `day` where `flag`; `payment` is when the amount due for it is paid."""
+    def ended(self, day: Day | Span, flag: int, payment: int) -> None:
+        """The contract ended on `day` where `flag`; `payment`, a value of the tape, is when the amount due for it is
+        paid."""
         self._join(self.ends, day, flag)
-        self.lives.append((flag, max(payment, 0.0)))
+        self.lives.append((flag, self.builder.emit(Op.MAX, payment, self.builder.constant(0.0))))
 
-    def _join(self, flags: dict[Day, int], day: Day, flag: int) -> None:
+    def _join(self, flags: dict[Day | Span, int], day: Day | Span, flag: int) -> None:
         flags[day] = self.builder.emit(Op.OR, flags[day], flag) if day in flags else flag
 
     def outputs(self) -> list[Output]:
@@ -105,7 +108,9 @@ class Ledger:
 
     def _life(self) -> int:
         """Years to the payment due for the ending, or to the last payment where the contract never ends early."""
-        life = self.builder.constant(self.last_payment)
-        for flag, payment in self.lives:
-            life = self.builder.emit(Op.SELECT, flag, self.builder.constant(payment), life)
+        emit, last = self.builder.emit, self.builder.constant(self.last_payment)
+        life = last
+        for flag, payment in self.lives:  # no two endings happen on one path
+            early = emit(Op.SELECT, flag, emit(Op.SUB, payment, last), self.builder.constant(0.0))
+            life = emit(Op.ADD, life, early)
         return life

@@ -47,6 +47,22 @@ class Op(IntEnum):
     STEP = 40  # x + s * z: one asset's log level moved by one normal times one factor; operands (x, s, z)
     BRIDGE_LOW = 41  # minimum of a Brownian bridge; operands (x0, x1, variance, u)
     BRIDGE_HIGH = 42
+    # continuous watching
+    UNHIT = 50  # chance that no barrier of a set is reached, given the levels at the dates; replaced before it runs
+    MOMENT = 51  # which part of a stretch has passed when a barrier is reached first, given that it is; likewise
+    BRIDGE_CLEAR = 52  # chance that a bridge does not reach a barrier; operands (d0, d1, variance), distances from it
+    BRIDGE_CORRIDOR = 53  # likewise of two barriers; operands (d0, d1, width, variance), d0 and d1 from the lower
+    BRIDGE_RANGE = 54  # maximum less minimum of a bridge, given the minimum; operands (d0, d1, variance, u)
+    LOOKUP = 55  # the entry that the whole part of x counts; operands (x, entries...), entries the same on every path
+    BRIDGE_MOMENT = 56  # which part of a step has passed at its hit; operands (d0, d1, normal^2 variance / 2, u)
+    # derivatives of the laws above that have no short form
+    CORRIDOR_BY_START = 57  # of BRIDGE_CORRIDOR by d0; the same operands
+    CORRIDOR_BY_WIDTH = 58  # by the width
+    CORRIDOR_BY_ENDS = 59  # by d0 and d1
+    RANGE_BY_START = 60  # of BRIDGE_RANGE by d0; operands (d0, d1, variance, range)
+
+
+ANY = -1  # the arity of an operation that takes any number of operands
 
 
 @dataclass(frozen=True, slots=True)
@@ -89,4 +105,15 @@ OPS: dict[Op, OpRow] = {
     Op.STEP: OpRow(3, "{0} + {1} * {2}"),
     Op.BRIDGE_LOW: OpRow(4, "bridge_low({0}, {1}, variance {2}, {3})"),
     Op.BRIDGE_HIGH: OpRow(4, "bridge_high({0}, {1}, variance {2}, {3})"),
+    Op.UNHIT: OpRow(ANY, "unhit"),
+    Op.MOMENT: OpRow(1, "moment at {0}"),
+    Op.BRIDGE_CLEAR: OpRow(3, "bridge_clear({0}, {1}, variance {2})"),
+    Op.BRIDGE_CORRIDOR: OpRow(4, "bridge_corridor({0}, {1}, width {2}, variance {3})"),
+    Op.BRIDGE_RANGE: OpRow(4, "bridge_range({0}, {1}, variance {2}, {3})"),
+    Op.LOOKUP: OpRow(ANY, "lookup"),
+    Op.BRIDGE_MOMENT: OpRow(4, "bridge_moment({0}, {1}, {2}, {3})"),
+    Op.CORRIDOR_BY_START: OpRow(4, "corridor_by_start({0}, {1}, width {2}, variance {3})"),
+    Op.CORRIDOR_BY_WIDTH: OpRow(4, "corridor_by_width({0}, {1}, width {2}, variance {3})"),
+    Op.CORRIDOR_BY_ENDS: OpRow(4, "corridor_by_ends({0}, {1}, width {2}, variance {3})"),
+    Op.RANGE_BY_START: OpRow(4, "range_by_start({0}, {1}, variance {2}, {3})"),
 }

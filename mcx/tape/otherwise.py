@@ -7,18 +7,20 @@ the tape once; a reading that says what the contract says comes out as the same 
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from mcx.dates.dated_contract import DatedContract
 from mcx.dates.otherwise import DatedOtherwise
 from mcx.faults import Fault
 from mcx.tape.builder import Builder
+from mcx.tape.formulas import fixed_values
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Output, Tape
 from mcx.tape.steps import PLAIN, Grid, Makeup, expand_levels
 from mcx.tape.unroll import unknown_laws, walked
 from mcx.tape.watching import conflicts
+from mcx.tape.weights import weigh
 
 
 @dataclass(frozen=True, slots=True)
@@ -41,19 +43,21 @@ class UnrolledOtherwise:
 
 
 def unroll_otherwise(
-    dated: DatedContract, others: Iterable[DatedOtherwise], *, nodes: Sequence[float], makeup: Makeup = PLAIN
+    dated: DatedContract, others: Iterable[DatedOtherwise], *, nodes: Sequence[float], makeup: Makeup = PLAIN,
+    pieces: int = 1, everything_drawn: bool = False,
 ) -> UnrolledOtherwise:
-    """One tape of a contract that can be unrolled by itself and of its other readings; `nodes` and `makeup` as for
+    """One tape of a contract that can be unrolled by itself and of its other readings; all else as for
     `unroll`.
 
     The extremes of a watch that another reading does not have are drawn beside its own: each output has its own law
     right, whether or not their joint law is known.
     """
     builder = Builder()
-    price = walked(dated, builder).outputs[0]
+    others = tuple(others)
+    price = walked(dated, builder, nodes).outputs[0]
     outputs, found, same, refused = [price], [], [], []
     for other in others:
-        value, faults = (None, other.faults) if other.dated is None else _price(other.dated, builder, makeup)
+        value, faults = (None, other.faults) if other.dated is None else _price(other.dated, builder, nodes, makeup)
         if faults:
             refused.append(DatedOtherwise(other.reading, None, tuple(sorted(set(faults)))))
         elif value == price.value:
@@ -62,14 +66,38 @@ def unroll_otherwise(
             found.append(other)
             outputs.append(Output.of("reading", value, other.reading.name))
             outputs.append(Output.of("difference", builder.emit(Op.SUB, value, price.value), other.reading.name))
-    tape, grid = expand_levels(drop_dead_code(builder.tape(outputs)), nodes, makeup)
+    together = drop_dead_code(builder.tape(outputs))
+    weighted = weigh(together, fixed_values(together, dated.contract), everything_drawn).tape
+    wanted = [output for output in weighted.outputs if output.kind != "gap"]
+    if unsure := _without_law(weighted, wanted, found):
+        kept = [other for other in others if other.reading not in {fault.reading for fault in unsure}]
+        left = unroll_otherwise(dated, kept, nodes=nodes, makeup=makeup, pieces=pieces, everything_drawn=everything_drawn)
+        return replace(left, refused=(*left.refused, *unsure))
+    tape, grid = expand_levels(drop_dead_code(replace(weighted, outputs=tuple(wanted))), nodes, makeup, pieces)
     return UnrolledOtherwise(tape, grid, tuple(found), tuple(same), tuple(refused))
 
 
-def _price(dated: DatedContract, builder: Builder, makeup: Makeup) -> tuple[int, Sequence[Fault]]:
+def _without_law(
+    tape: Tape, outputs: Sequence[Output], found: Sequence[DatedOtherwise]
+) -> tuple[DatedOtherwise, ...]:
+    """The readings that have no law beside the others, though they have one alone: what enters by its chances alone may
+    have to be drawn beside what others draw. All of them where the contract's own law is lost."""
+
+    def faults(output: Output) -> tuple[Fault, ...]:
+        return tuple(conflicts(drop_dead_code(replace(tape, outputs=(output,)))))
+
+    lost = faults(outputs[0])
+    wrong = [(other, lost or faults(output)) for other, output in zip(found, outputs[1::2], strict=True)]
+    return tuple(DatedOtherwise(other.reading, None, each) for other, each in wrong if each)
+
+
+def _price(
+    dated: DatedContract, builder: Builder, nodes: Sequence[float], makeup: Makeup
+) -> tuple[int, Sequence[Fault]]:
     """The price of one reading as a value of the tape, and why it cannot be simulated."""
-    walk = walked(dated, builder)
+    walk = walked(dated, builder, nodes)
     price = walk.outputs[0]
     alone = drop_dead_code(builder.tape([price]))
-    faults = walk.faults or conflicts(alone) or unknown_laws(alone, makeup)
+    faults = (walk.faults or unknown_laws(alone, makeup)
+              or conflicts(weigh(alone, fixed_values(alone, dated.contract)).tape))
     return price.value, [*faults, *walk.observations.missing(alone)]

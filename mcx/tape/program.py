@@ -13,7 +13,7 @@ from enum import Enum
 import numpy as np
 
 from mcx.faults import Place
-from mcx.tape.ops import OPS, Op
+from mcx.tape.ops import ANY, OPS, Op
 
 
 class LeafKind(Enum):
@@ -69,13 +69,47 @@ class LevelKey:
 
 
 @dataclass(frozen=True, slots=True)
+class Barrier:
+    """A side of an asset that is watched over a stretch: LOW or HIGH, and the key of the extreme."""
+
+    op: Op
+    key: LevelKey
+
+    @property
+    def order(self) -> tuple:
+        return self.key.start, self.key.time, self.key.asset, self.op
+
+
+class Bound(Enum):
+    """Which number stands for the chance that no barrier of several assets is reached within a step, of which only
+    the assets' own chances are known: M. Frechet's bounds (1951), or the chance itself where one asset is watched."""
+
+    EXACT = "exact"
+    LOWER = "lower"  # max(0, sum of the chances - (assets - 1))
+    UPPER = "upper"  # the smallest of the chances
+
+
+@dataclass(frozen=True, slots=True)
+class Unhit:
+    """What an UNHIT is about: barriers, each at the level that the operand in its place gives."""
+
+    barriers: tuple[Barrier, ...]
+    bound: Bound
+
+    def __str__(self) -> str:
+        shown = [f"{one.op.name.lower()} {one.key}" for one in self.barriers]
+        return f"{', '.join(shown)} ({self.bound.value})"
+
+
+@dataclass(frozen=True, slots=True)
 class Instruction:
-    """One operation. `payload` is the number of a CONSTANT, the Leaf of a LEAF, the LevelKey of LEVEL, LOW and HIGH,
-    the dimension of NORMAL and UNIFORM; `place` is the line of the contract or payoff it came from, where known."""
+    """One operation. `payload` is the number of a CONSTANT, the Leaf of a LEAF, the LevelKey of LEVEL, LOW, HIGH and
+    MOMENT, the Unhit of an UNHIT, the dimension of NORMAL and UNIFORM; `place` is the line of the contract or payoff
+    it came from, where known."""
 
     op: Op
     operands: tuple[int, ...] = ()
-    payload: float | Leaf | LevelKey | int | None = None
+    payload: float | Leaf | LevelKey | Unhit | int | None = None
     place: Place | None = None
 
 
@@ -83,7 +117,8 @@ class Instruction:
 class Output:
     """A named result of the tape. `flag` outputs are 0 or 1 on each path.
 
-    `kind` is price, leg, part, owed, condition, end, life or level; `subject` the leg's, part's, event's or asset's name;
+    `kind` is price, leg, part, owed, condition, end, life, level, or gap: by how much the upper bound of the output that
+    `subject` names lies above the lower one. Else `subject` is the leg's, part's, event's or asset's name;
     `day` the date or span of dates that a condition or an end is about ('' for all dates). The name is made of them.
     """
 
@@ -139,6 +174,8 @@ class Tape:
         lines = []
         for number, step in enumerate(self.instructions):
             shown = OPS[step.op].form.format(*(f"v{k}" for k in step.operands))
+            if OPS[step.op].arity == ANY:
+                shown += f" of {', '.join(f'v{k}' for k in step.operands)}"
             if step.payload is not None:
                 shown += f" {step.payload}"
             lines.append(f"v{number} = {shown}")
@@ -166,7 +203,8 @@ class Program:
     Rows 0 .. draws-1 of the register file hold the draws (normals first, then uniforms); rows draws .. rows-1 are
     work registers. An operand k >= 0 is row k; k < 0 is `scalars[-1 - k]`.
 
-    code      (instructions, 6) int32: op, destination row, operands a, b, c, d (unused: 0)
+    code      (instructions, 6) int32: op, destination row, operands a, b, c, d (unused: 0); of a LOOKUP what it counts,
+              its first entry and its last, between which its entries stand in `scalars`
     scalars   (scalars,) float64: values that are the same on every path
     outputs   (outputs,) int32: operand number of each output
     sums      (sums, 3) int32: of two operands whose product is summed over the paths, the first; the second, or

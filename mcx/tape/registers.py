@@ -24,6 +24,7 @@ class _Scalars:
 
     values: list[float] = field(default_factory=list)
     numbers: dict[str, int] = field(default_factory=dict)
+    tables: dict[tuple[float, ...], int] = field(default_factory=dict)
 
     def operand(self, value: float) -> int:
         key = float(value).hex()
@@ -31,6 +32,14 @@ class _Scalars:
             self.numbers[key] = len(self.values)
             self.values.append(float(value))
         return -1 - self.numbers[key]
+
+    def table(self, entries: Sequence[float]) -> tuple[int, int]:
+        """The first and the last of entries that stand one behind the other; equal tables are held once."""
+        key = tuple(entries)
+        if key not in self.tables:
+            self.tables[key] = len(self.values)
+            self.values.extend(key)
+        return -1 - self.tables[key], -self.tables[key] - len(key)
 
 
 @dataclass(slots=True)
@@ -82,14 +91,17 @@ def lower(tape: Tape, leaf_values: Sequence[float] | np.ndarray) -> Program:
         elif step.op is Op.UNIFORM:
             operand[number] = tape.normals + step.payload
         else:
-            sources = [read(k) for k in step.operands]
+            if step.op is Op.LOOKUP:  # its entries stand together, so that the kernel counts from the first
+                sources = [read(step.operands[0]), *scalars.table([uniform[k] for k in step.operands[1:]])]
+            else:
+                sources = [read(k) for k in step.operands]
             if step.op in COMMUTATIVE and sources[0] < 0:
                 sources.reverse()
             operand[number] = registers.take()
             code.append((int(step.op), operand[number], *sources, *(0,) * (4 - len(sources))))
             done.add(number)  # nothing may read it: the register is then free at once
         for value in sorted(done | add_up(number)):
-            if last_use[value] == number and operand[value] >= draws:
+            if last_use[value] == number and operand.get(value, -1) >= draws:  # entries of a table have no operand
                 registers.free.append(operand[value])
     outputs = [read(output.value) for output in tape.outputs]
     return Program(

@@ -2,7 +2,7 @@
 
 A table over the closed list in `ops.py`, keyed by `Op`; every other meaning (adjoint, kernel) is another column or
 another table over the same list. The interpreter, constant folding and the tests read this one; the kernel is tested
-against it. Inputs (arity 0) have no rule: their values come from outside.
+against it. Inputs, and what is replaced before a tape runs, have no rule.
 """
 
 from __future__ import annotations
@@ -12,6 +12,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from mcx.tape.bridges import (
+    bridge_clear, bridge_corridor, bridge_moment, bridge_range, corridor_by_ends, corridor_by_start, corridor_by_width,
+    lookup, range_by_start,
+)
 from mcx.tape.ops import Op
 
 Value = np.ndarray | np.float64 | float
@@ -69,6 +73,15 @@ RULES: dict[Op, Rule] = {
     Op.STEP: Rule(lambda x, s, z: x + s * z),
     Op.BRIDGE_LOW: Rule(bridge_low),
     Op.BRIDGE_HIGH: Rule(bridge_high),
+    Op.BRIDGE_CLEAR: Rule(bridge_clear),
+    Op.BRIDGE_CORRIDOR: Rule(bridge_corridor),
+    Op.CORRIDOR_BY_START: Rule(corridor_by_start),
+    Op.CORRIDOR_BY_WIDTH: Rule(corridor_by_width),
+    Op.CORRIDOR_BY_ENDS: Rule(corridor_by_ends),
+    Op.RANGE_BY_START: Rule(range_by_start),
+    Op.BRIDGE_RANGE: Rule(bridge_range),
+    Op.LOOKUP: Rule(lookup),
+    Op.BRIDGE_MOMENT: Rule(bridge_moment),
 }
 
 

@@ -8,11 +8,11 @@ from dataclasses import dataclass
 from mcx.checked.formula import Name
 from mcx.checked.payoff import At, Running
 from mcx.dates.dated_contract import Day, Watch
-from mcx.tape.formulas import Formulas, Scene, Unreadable, Values
+from mcx.tape.formulas import Formulas, Unreadable, Values
 from mcx.tape.observations import Observations
 from mcx.tape.ops import Op
-from mcx.tape.program import LevelKey
-from mcx.tape.watching import Side, watched_side
+from mcx.tape.program import Barrier, LevelKey
+from mcx.tape.watching import HIGHEST, Extremes
 
 FOLDS = {
     "average": Op.ADD,
@@ -58,21 +58,26 @@ class Observed:
 
 
 @dataclass(slots=True)
-class Watched:
-    """A running value watched continuously: the extreme of one asset's level so far, and the formula of it.
+class Extreme:
+    """The lowest or highest level of an asset so far, until a time."""
 
-    The extreme is extended when somebody reads it, up to that day and never past the end of the watch, so that days
-    that nobody asks about cost nothing. What lies before the valuation date is known by fixings, which may decide a
-    flag, or must be stated by the contract.
+    value: int
+    until: float
+
+
+class Watched:
+    """A running value watched continuously: the extremes that decide it so far, and the formula of them.
+
+    The extremes are extended when somebody reads the value, up to that day and never past the end of the watch, so
+    that days that nobody asks about cost nothing. `barriers` are the extremes that were asked for. What lies before
+    the valuation date is known by fixings, which may decide a flag, or must be stated by the contract.
     """
 
-    watch: Watch
-    formulas: Formulas
-    observations: Observations
-    start: Values | None
-    side: Side | None = None
-    extreme: int | None = None
-    until: float = 0.0
+    def __init__(self, watch: Watch, formulas: Formulas, observations: Observations, start: Values | None):
+        self.watch, self.formulas, self.observations, self.start = watch, formulas, observations, start
+        self.barriers: dict[Barrier, None] = {}
+        self._extremes: dict[tuple[int, Op], Extreme] = {}
+        self._asked = False
 
     def read(self, asker: Name, day: Day) -> Values:
         running, watch = self.watch.running, self.watch
@@ -80,30 +85,44 @@ class Watched:
             if self.start is None:
                 raise Unreadable(asker.place, f"'{running.name}' is read before its first date")
             return self.start
-        if self.side is None:
-            self.side = watched_side(running, self.formulas)
-        found = [self.start] if self.start is not None else []
-        if watch.start.time < 0.0:
-            found.append((self.formulas.builder.constant(self._past(min(day, watch.end, key=_time))),))
-        if day.time >= 0.0 and watch.end.time >= 0.0:
-            self._extend(min(day.time, watch.end.time))
-            found.append(self._formula_at(self.observations.scaled(self.side.asset, self.extreme)))
-        first, *rest = found
-        for values in rest:
-            first = self.formulas.spread(FOLDS[running.how], first, values, place=running.place)
-        return first
+        if day.time >= 0.0:
+            return self.at(day.time)
+        self._asked = True
+        return self._joined([(self._past(min(day, watch.end, key=_time)),)])
+
+    def at(self, time: float) -> Values:
+        """The value at a time from the start of the watch on, not before the valuation date."""
+        running, watch = self.watch.running, self.watch
+        self._asked = True
+        found = [self.before()] if watch.start.time < 0.0 else []
+        if watch.end.time >= 0.0:
+            until = min(time, watch.end.time)
+            extremes = Extremes(self.formulas, lambda asset, op: self._extended(asset, op, until))
+            found.append(extremes.read(running.formula, HIGHEST[running.how]))
+            if not self._extremes:
+                raise Unreadable(running.place, "a continuous watch needs a formula of an asset's level")
+        return self._joined(found)
+
+    def before(self) -> Values:
+        """The value over the part of a watch that lies before the valuation date, which it begins before."""
+        return (self._past(min(Day(0.0, self.observations.history.valuation), self.watch.end, key=_time)),)
 
     def known(self, day: Day) -> Values:
-        """What is known of the watch so far, today's level apart; nothing where it has not begun."""
-        if self.side is None or self.watch.start.time >= 0.0 or day.time < self.watch.start.time:
+        """What is known of the watch so far, today's level apart; nothing where it has not begun or nothing reads it."""
+        if not self._asked or self.watch.start.time >= 0.0 or day.time < self.watch.start.time:
             return ()
-        return (self.formulas.builder.constant(self._past(min(day, self.watch.end, key=_time))),)
+        return (self._past(min(day, self.watch.end, key=_time)),)
 
-    def _formula_at(self, level: int) -> Values:
-        scene = Scene(spot=lambda _: (level,) * len(self.formulas.contract.assets), running=_unreadable)
-        return self.formulas.read(self.watch.running.formula, scene)
+    def _joined(self, found: list[Values]) -> Values:
+        first, *rest = found if self.start is None else [self.start, *found]
+        for values in rest:
+            first = self.formulas.spread(FOLDS[self.watch.running.how], first, values, place=self.watch.running.place)
+        return first
 
-    def _past(self, day: Day) -> float:
+    def _past(self, day: Day) -> int:
+        return self.formulas.builder.constant(self._known_past(day))
+
+    def _known_past(self, day: Day) -> float:
         """The value over the part of the watch that lies before the valuation date, up to a day."""
         history, running = self.observations.history, self.watch.running
         today = Day(0.0, history.valuation)
@@ -150,31 +169,41 @@ class Watched:
 
     def _by_fixings(self, day: Day) -> float | None:
         """The value that the fixings from the start of the watch up to a day give; None without any."""
-        ends = self.observations.history.extremes(self.side.asset, self.watch.start, day)
-        if ends is None:
+        history, constant = self.observations.history, self.formulas.builder.constant
+
+        def extreme(asset: int, op: Op) -> int:
+            ends = history.extremes(asset, self.watch.start, day)
+            if ends is None:
+                raise _NoFixings
+            return constant(ends[0] if op is Op.LOW else ends[1])
+
+        try:
+            (value,) = Extremes(self.formulas, extreme).read(self.watch.running.formula, HIGHEST[self.watch.running.how])
+        except _NoFixings:
             return None
-        level = ends[0] if self.side.level_op is Op.LOW else ends[1]
-        (value,) = self._formula_at(self.formulas.builder.constant(level))
         return self.formulas.fixed(value)
 
-    def _extend(self, time: float) -> None:
+    def _extended(self, asset: int, op: Op, time: float) -> int:
         builder, place = self.formulas.builder, self.watch.running.place
-        if self.extreme is None:
-            self.until = max(self.watch.start.time, 0.0)
-            if time == self.until:  # on its first day: the level itself
-                self.extreme = builder.input(Op.LEVEL, LevelKey(self.side.asset, time), place)
-                return
-        elif time <= self.until:
-            return
-        piece = builder.input(self.side.level_op, LevelKey(self.side.asset, time, self.until), place)
-        op = Op.MIN if self.side.level_op is Op.LOW else Op.MAX
-        self.extreme = piece if self.extreme is None else builder.emit(op, self.extreme, piece, place=place)
-        self.until = time
+        start = max(self.watch.start.time, 0.0)
+        extreme = self._extremes.get((asset, op))
+        if time == start:  # on its first day: the level itself
+            value = builder.input(Op.LEVEL, LevelKey(asset, time), place)
+            self._extremes.setdefault((asset, op), Extreme(value, time))
+            return self.observations.scaled(asset, value)
+        if extreme is None or time > extreme.until:
+            key = LevelKey(asset, time, extreme.until if extreme else start)
+            self.barriers[Barrier(op, key)] = None
+            piece = builder.input(op, key, place)
+            joined = Op.MIN if op is Op.LOW else Op.MAX
+            value = builder.emit(joined, extreme.value, piece, place=place) if extreme else piece
+            extreme = self._extremes[asset, op] = Extreme(value, time)
+        return self.observations.scaled(asset, extreme.value)
+
+
+class _NoFixings(Exception):
+    """No fixing of an asset in the part of a watch that is asked for."""
 
 
 def _time(day: Day) -> float:
     return day.time
-
-
-def _unreadable(name: Name) -> Values:
-    raise Unreadable(name.place, f"'{name.name}' is not fixed while it is watched continuously")

@@ -4,7 +4,9 @@ With levels and extremes held where they are, a leaf moves only their density: d
 (the likelihood ratio method: Glasserman 2003, section 7.3). A step moves the logs by drifts m and by L z with a
 triangular factor L of the covariance; with w = L'^-1 z the score by m is w, by L it is w z' - L'^-1, and a log spot is
 the drift of the first step. Of a bridge only what is read has a density: where its extreme is read by one comparison,
-whether it crossed that level, with probability exp(-2 (x0 - b)(x1 - b) / v); else the extreme itself.
+whether it crossed that level, with probability exp(-2 (x0 - b)(x1 - b) / v); else the extreme itself. A chance that no
+barrier is reached is a function of the levels and of the variance, and has no density. The moment of a hit has: one
+normal and one uniform serve all steps, so its score belongs to what is paid at that moment alone.
 
 Every score is appended to a tape under construction as a value, on each path.
 """
@@ -14,6 +16,7 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
+from mcx.tape.bridges import CLOSEST
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
 from mcx.tape.program import Leaf, LeafKind, Tape, spot_leaf
@@ -21,6 +24,7 @@ from mcx.tape.steps import Grid
 
 LEAST = 1e-300
 BRIDGES = (Op.BRIDGE_LOW, Op.BRIDGE_HIGH)
+DRAWN = (*BRIDGES, Op.BRIDGE_RANGE, Op.BRIDGE_MOMENT)  # within a step
 
 
 @dataclass(frozen=True, slots=True)
@@ -81,12 +85,39 @@ def latest_steps(tape: Tape, grid: Grid) -> list[int]:
     latest: list[int] = []
     for step in tape.instructions:
         last = max((latest[k] for k in step.operands), default=0)
-        if step.op is Op.NORMAL:
+        if step.op is Op.NORMAL and step.payload < (len(grid.times) - 1) * len(grid.assets):  # else of the moments
             last = step.payload // len(grid.assets) + 1
         elif step.op in BRIDGES:
             last = max(last, numbers[tape.instructions[step.operands[2]].payload.end])
         latest.append(last)
     return latest
+
+
+def moment_scores(builder: Builder, tape: Tape, moment: int) -> tuple[Score, ...]:
+    """The scores of the moment of a hit by the variance of its step and, in the first step, by the log spot, with both
+    ends held.
+
+    With y = t / (T - t), of which the moment t is a function, d0 and d1 the distances of the ends from the level:
+    log p = log d0 - log v / 2 - (d1 y - d0)^2 / (2 v y), up to what depends on y alone; (d1 y - d0)^2 / (v y) is the
+    square of the normal that the moment was drawn with. `moment` is the number of a BRIDGE_MOMENT.
+    """
+    emit, constant = builder.emit, builder.constant
+    signed0, signed1, half, _ = tape.instructions[moment].operands
+    product = tape.instructions[half].operands  # the square of the normal and half the variance
+    variance = next(k for part in product for k in tape.instructions[part].operands if tape.instructions[k].op is Op.LEAF)
+    square = next(part for part in product if variance not in tape.instructions[part].operands)
+    leaf = tape.instructions[variance].payload
+    rest = emit(Op.SUB, square, constant(1.0))
+    found = [Score(leaf, emit(Op.MUL, rest, emit(Op.DIV, constant(0.5), variance)), 0)]
+    start = tape.instructions[signed0].operands[0]
+    if tape.instructions[start].op is Op.LEAF:  # the log spot
+        d0, d1 = (emit(Op.MAX, emit(Op.ABS, d), constant(CLOSEST)) for d in (signed0, signed1))
+        pull = emit(Op.SUB, d1, emit(Op.MUL, d0, emit(Op.DIV, emit(Op.SUB, constant(1.0), moment), moment)))
+        by_distance = emit(Op.ADD, emit(Op.DIV, constant(1.0), d0), emit(Op.DIV, pull, variance))
+        above = emit(Op.LT, constant(0.0), signed0)
+        by_start = emit(Op.SELECT, above, by_distance, emit(Op.NEG, by_distance))
+        found.append(Score(tape.instructions[start].payload, by_start, 0))
+    return tuple(found)
 
 
 class _Scores:

@@ -6,6 +6,7 @@ comparison does, and so does a division by what may be zero; a root or log of wh
 there, so that a derivative path by path has no finite variance or no mean, and counts alike. A comparison is harmless
 for a value that is the same on both sides where the compared numbers are equal: a call's `spot - strike if spot >
 strike else 0`. That is shown by algebra, on the polynomials of `polynomials.py`; what is not shown counts as a jump.
+The chance that a barrier is not reached does not jump where a level reaches it: it is 0 there from both sides.
 
 For each comparison the change of every value when it turns is followed through the tape: a polynomial, or UNKNOWN. The
 leaves have their numbers from the market, moved a little so that nothing is equal by accident; the contract's terms
@@ -30,13 +31,14 @@ COMPARISONS = frozenset({Op.LT, Op.LE, Op.EQ, Op.NE})
 KEEPS_POSITIVE = frozenset({Op.ADD, Op.MUL, Op.DIV, Op.MIN, Op.POW, Op.SQRT})
 UNKNOWN = None  # a change that is not followed any further
 SETTINGS, MOVE, SEED = 2, 1e-3, 20240229
-CONDITION, DIVISION, ROOT = "condition", "division", "root"
+CONDITION, DIVISION, ROOT, MOMENT = "condition", "division", "root", "moment of a hit"
 
 
 @dataclass(frozen=True, slots=True, order=True)
 class Jump:
-    """Why a value jumps: 'condition', 'division' (by what may be zero; also a power of it) or 'root' (also a log, of
-    what may be zero: no jump, but no bounded slope either), and its place, if known.
+    """Why a value jumps: 'condition', 'division' (by what may be zero; also a power of it), 'root' (also a log, of what
+    may be zero: no jump, but no bounded slope either) or 'moment of a hit' (drawn by a choice between two roots, and
+    counted in whole days), and its place, if known.
 
     `value` is the first value of the tape that does so: the same line makes one on each date.
     """
@@ -117,6 +119,8 @@ class _Walk:
                     boundary = total(self.forms[x], self.forms[y], -1.0)
                     if hit := self._follow(number, {(): 1.0}, boundary):
                         yield Jump(number, CONDITION, step.place), hit
+            elif step.op is Op.BRIDGE_MOMENT or (step.op is Op.LOOKUP and not stepwise[step.operands[0]]):
+                yield Jump(number, MOMENT, step.place), self.reached[number]
             elif kind := self._without_bound(step.op, step.operands, positive, square):
                 yield Jump(number, kind, step.place), self.reached[number]
 

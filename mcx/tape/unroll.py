@@ -8,16 +8,17 @@ Running values need no care after the contract has ended, because nothing is pai
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Sequence
-from dataclasses import dataclass, field
+from collections.abc import Callable, Iterable, Sequence
+from dataclasses import dataclass, field, replace
 
 from mcx.checked.formula import Formula, Name, Previous
 from mcx.checked.kinds import Kind
 from mcx.checked.payoff import Action, Assign, Deliver, End, Event, Pay, Running
-from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Occasion, Update
+from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Moment, Occasion, Update
 from mcx.faults import Fault, Place
 from mcx.tape.builder import Builder
-from mcx.tape.formulas import Formulas, Scene, Unreadable, Values
+from mcx.tape.formulas import Formulas, Scene, Unreadable, Values, fixed_values
+from mcx.tape.hits import Due, Hits, Span, Stretch, which_first
 from mcx.tape.ledger import Ledger, Payment
 from mcx.tape.observations import Observations
 from mcx.tape.ops import Op
@@ -25,25 +26,34 @@ from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Instruction, Leaf, LeafKind, LevelKey, Output, Tape
 from mcx.tape.running import FOLDS, Observed, Watched
 from mcx.tape.state import Accruing, Delivery, PastEvent, Settled, State
-from mcx.tape.steps import PLAIN, Grid, Makeup, expand_levels
+from mcx.tape.steps import PLAIN, SAME_TIME, Grid, Makeup, expand_levels
 from mcx.tape.watching import conflicts
+from mcx.tape.weights import Weighted, weigh
 
 UNKNOWN_SUM = ("an asset with cash dividends that is converted at the rate of the day cannot be watched continuously: "
                "its law between two dates is not known; name the dates on which it is watched")
+UNKNOWN_MOMENT = ("the moment of a hit is not known where cash dividends are still to come or a dividend on an ex date "
+                  "may bring the hit about; name the dates on which the level is watched")
+
+AT_A_HIT = ("shares cannot be delivered at the moment of a hit that is watched continuously: their level on the delivery "
+            "date, which depends on that moment, is not known; deliver on a date")
+PAST_HIT = ("'{}' came true before the valuation date, and at which moment is not read, nor what was paid then; a contract "
+            "that has ended needs no price; otherwise watch it on dates, whose fixings tell the day")
 
 
 @dataclass(frozen=True, slots=True)
 class WatchNote:
-    """How a continuously watched running value enters: by which extreme of which asset, and by which law.
+    """How a continuously watched running value enters: by which extremes of which assets, and by which law.
 
-    `side` is 'low', 'high' or '' where nothing reads it; `law` is 'exact', 'nearly exact' (cash
-    dividends to come enter at their mean over a step) or 'unread'.
+    `sides` are (asset, 'low' or 'high'), empty where nothing reads it; `law` is 'exact', 'nearly exact' (cash dividends
+    to come enter at their mean over a step), 'bracketed' or 'unread'; `drawn` whether extremes are drawn instead of
+    entering by their chances.
     """
 
     name: str
-    asset: str
-    side: str
+    sides: tuple[tuple[str, str], ...]
     law: str
+    drawn: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -51,6 +61,7 @@ class Unrolled:
     """A contract as a tape. With faults the tapes are empty.
 
     tape      reads normals and uniforms only: ready for `lower`
+    bracketed whether outputs are the middle between two bounds, as far apart as their 'gap' outputs say
     observed  the same contract still reading LEVEL, LOW and HIGH: its meaning on given levels
     grid      the simulated times and assets
     levels    for each 'level' output, by its name, the asset's number and the time: its mean is the forward
@@ -64,23 +75,40 @@ class Unrolled:
     watches: tuple[WatchNote, ...]
     state: State
     faults: tuple[Fault, ...] = ()
+    bracketed: bool = False
 
 
-def unroll(dated: DatedContract, *, nodes: Sequence[float], makeup: Makeup = PLAIN, given: bool = False) -> Unrolled:
+def unroll(
+    dated: DatedContract, *, nodes: Sequence[float], makeup: Makeup = PLAIN, given: bool = False, pieces: int = 1,
+    everything_drawn: bool = False,
+) -> Unrolled:
     """The tape of a contract; `nodes` are the times of the market's curve points (`MarketMap.nodes`), `makeup` how
-    levels come about (`MarketMap.makeup`). A missing fixing is a fault unless levels will be `given`."""
-    walk = _Walk(dated)
+    levels come about (`MarketMap.makeup`). A missing fixing is a fault unless levels will be `given`.
+
+    `pieces` refines the steps in which several assets are watched together; `everything_drawn` makes flags of
+    continuous watches draws on each path where they could be probabilities.
+    """
+    walk = _Walk(dated, nodes=nodes)
     walk.run()
     observed = drop_dead_code(walk.builder.tape(walk.ledger.outputs()))
     missing = [] if given else walk.observations.missing(observed)
-    faults = [*(walk.faults or conflicts(observed) or unknown_laws(observed, makeup)), *missing]
+    faults = [*(walk.faults or unknown_laws(observed, makeup)), *missing]
     if faults:
-        return Unrolled(Tape((), ()), Tape((), ()), Grid((0.0,), ()), {}, (), State(), tuple(sorted(set(faults))))
+        return _refused(faults)
+    weighted = weigh(observed, fixed_values(observed, dated.contract), everything_drawn)
+    if faults := conflicts(weighted.tape):
+        return _refused(faults)
+    notes = walk.notes(weighted, makeup)
     if given:
-        return Unrolled(Tape((), ()), observed, Grid((0.0,), ()), {}, walk.notes(makeup), walk.state)
+        return Unrolled(Tape((), ()), observed, Grid((0.0,), ()), {}, notes, walk.state)
     observed, levels = _with_last_levels(observed, dated.contract.assets)
-    tape, grid = expand_levels(observed, nodes, makeup)
-    return Unrolled(tape, observed, grid, levels, walk.notes(makeup), walk.state)
+    weighted = weigh(observed, fixed_values(observed, dated.contract), everything_drawn)
+    tape, grid = expand_levels(weighted.tape, nodes, makeup, pieces)
+    return Unrolled(tape, observed, grid, levels, notes, walk.state, (), bool(weighted.bracketed))
+
+
+def _refused(faults: Iterable[Fault]) -> Unrolled:
+    return Unrolled(Tape((), ()), Tape((), ()), Grid((0.0,), ()), {}, (), State(), tuple(sorted(set(faults))))
 
 
 def last_read(dated: DatedContract) -> float:
@@ -92,9 +120,18 @@ def last_read(dated: DatedContract) -> float:
 
 
 def unknown_laws(tape: Tape, makeup: Makeup) -> list[Fault]:
-    """Continuous watches of an asset with cash dividends that is converted at the rate of the day."""
-    return sorted({Fault(step.place, UNKNOWN_SUM) for step in tape.instructions
-                   if step.op in (Op.LOW, Op.HIGH) and step.payload.asset in set(makeup.cash) & set(makeup.rates)})
+    """Continuous watches of an asset with cash dividends that is converted at the rate of the day, and moments of hits
+    that a dividend may bring about."""
+    faults = []
+    for step in tape.instructions:
+        if step.op in (Op.LOW, Op.HIGH) and step.payload.asset in set(makeup.cash) & set(makeup.rates):
+            faults.append(Fault(step.place, UNKNOWN_SUM))
+        if step.op is Op.MOMENT:
+            asset, start, end = step.payload.asset, step.payload.start, step.payload.time
+            falls = any(asset == other and start < when < end + SAME_TIME for other, when in makeup.ex)
+            if falls or asset in makeup.cash:
+                faults.append(Fault(step.place, UNKNOWN_MOMENT))
+    return faults
 
 
 @dataclass(frozen=True, slots=True)
@@ -109,15 +146,15 @@ class Walked:
 
     outputs: tuple[Output, ...]
     payments: tuple[Payment, ...]
-    ends: dict[Day, int]
+    ends: dict[Day | Span, int]
     observations: Observations
     faults: tuple[Fault, ...]
 
 
-def walked(dated: DatedContract, builder: Builder) -> Walked:
+def walked(dated: DatedContract, builder: Builder, nodes: Sequence[float]) -> Walked:
     """A contract put on a tape under construction, still reading levels. Contracts that share a builder share what
     they have in common; continuous watches are not checked against each other."""
-    walk = _Walk(dated, builder)
+    walk = _Walk(dated, builder, nodes)
     walk.run()
     ledger = walk.ledger
     return Walked(tuple(ledger.outputs()), tuple(ledger.payments), dict(ledger.ends), walk.observations,
@@ -153,13 +190,13 @@ class _Branch:
 
     values: dict[str, Values]
     ends: bool = False
-    due: list[float] = field(default_factory=list)
+    due: list[int] = field(default_factory=list)  # times, as values of the tape
 
 
 class _Walk:
     """The state of a contract while its dates are walked: alive flag, running values, ledger, faults."""
 
-    def __init__(self, dated: DatedContract, builder: Builder | None = None):
+    def __init__(self, dated: DatedContract, builder: Builder | None = None, nodes: Sequence[float] = ()):
         self.dated = dated
         payoff = dated.contract.payoff
         self.builder = builder or Builder()
@@ -171,8 +208,10 @@ class _Walk:
         self.faults: list[Fault] = []
         self.observed: dict[str, Observed | Watched] = {}
         self.settable: dict[str, Values] = {}
+        self._before: dict[str, int] = {}  # flags that this day's events wait for, as they stood before it
         self.memory: dict[Place, dict[int, Values]] = {}  # by the place of the running value or event
         self._previous: dict[Place, tuple[Previous, ...]] = {}
+        self.hits = Hits(dated, nodes, self.formulas, self.observations)
         watches = {watch.running.name: watch for watch in dated.watches}
         for running in payoff.running:
             start = self._start(running.start)
@@ -185,9 +224,12 @@ class _Walk:
 
     def run(self) -> None:
         """Walk every moment, until the contract has ended on every path."""
+        self.faults += which_first(self.dated)
         for moment in self.dated.moments:
+            self._hit_until(moment.day.time)
             if self.builder.number(self.alive) == 0.0:
                 break
+            self._before = self._flags_before(moment)
             for update in moment.updates:
                 self._update(update)
             for number, event in enumerate(moment.events):
@@ -199,6 +241,7 @@ class _Walk:
                     self.faults.append(trouble.fault)
             if moment.day.time <= 0.0:
                 self._note_state(moment.day)
+        self._hit_until(math.inf)
 
     def _note_state(self, day: Day) -> None:
         """The running values that are known after a day of the past."""
@@ -216,16 +259,51 @@ class _Walk:
             else:
                 self.state.running.pop(running.name, None)
 
-    def notes(self, makeup: Makeup) -> tuple[WatchNote, ...]:
-        names = self.dated.contract.assets
-        return tuple(
-            WatchNote(name, names[state.side.asset], state.side.level_op.name.lower(),
-                      "nearly exact" if state.side.asset in makeup.cash else "exact")
-            if state.side
-            else WatchNote(name, "", "", "unread")
-            for name, state in self.observed.items()
-            if isinstance(state, Watched)
-        )
+    def _hit_until(self, time: float) -> None:
+        """Everything that happens at hits up to a time."""
+        for stretch in self.hits.until(time):
+            if self.builder.number(self.alive) != 0.0:
+                try:
+                    self._hit(stretch)
+                except Unreadable as trouble:
+                    self.faults.append(trouble.fault)
+
+    def _hit(self, stretch: Stretch) -> None:
+        event = stretch.hit.event
+        watch = stretch.hit.watch
+        before, after = self.hits.turn(stretch, self.observed[watch.running.name])
+        if watch.start.time < 0.0 and stretch.start == stretch.end and self.builder.number(before) == 1.0:
+            raise Unreadable(event.at.place, PAST_HIT.format(watch.running.name))
+        turns = self._newly(before, after, event.at.place)
+        if self.builder.number(turns) == 0.0:
+            return
+        scene = self.hits.scene(stretch, after)
+        condition = self.formulas.one(event.condition, scene) if event.condition else self.builder.constant(1.0)
+        self._carry_out(event, stretch.day, turns, condition, scene,
+                        due=lambda pay: self.hits.due(stretch, pay, scene.part),
+                        otherwise_due=lambda: self.hits.time(stretch, scene.part))
+
+    def _newly(self, before: int, after: int, place: Place) -> int:
+        """Whether a flag holds that did not before."""
+        emit = self.builder.emit
+        return emit(Op.AND, emit(Op.NOT, before, place=place), after, place=place)
+
+    def _flags_before(self, moment: Moment) -> dict[str, int]:
+        """The flags that events of a day wait for, where they are observed on dates, as they stand before it."""
+        names = {each.event.at.name for each in moment.events if each.event.at.part == "once"}
+        states = {name: self.observed[name].values for name in names}
+        return {name: values[0] if values else self.builder.constant(0.0) for name, values in states.items()}
+
+    def notes(self, weighted: Weighted, makeup: Makeup) -> tuple[WatchNote, ...]:
+        names, found = self.dated.contract.assets, []
+        for name, state in self.observed.items():
+            if isinstance(state, Watched):
+                sides = dict.fromkeys((names[one.key.asset], one.op.name.lower()) for one in state.barriers)
+                nearly = any(one.key.asset in makeup.cash for one in state.barriers)
+                law = "bracketed" if weighted.bracketed & set(state.barriers) else "nearly exact" if nearly else "exact"
+                law = law if sides else "unread"
+                found.append(WatchNote(name, tuple(sides), law, bool(weighted.drawn & set(state.barriers))))
+        return tuple(found)
 
     def _start(self, formula: Formula | None) -> Values | None:
         """The value of `start:`, of terms and numbers only."""
@@ -273,42 +351,66 @@ class _Walk:
         condition = self.builder.constant(1.0)
         if event.condition:
             condition = self._settled(self.formulas.one(event.condition, scene), occasion.day)
-        happens = self.builder.emit(Op.AND, self.alive, condition, place=event.place)
-        if event.name:
-            self.ledger.happened(event.name, occasion.day, happens)
-        if occasion.day.time <= 0.0 and self.builder.number(self.alive) != 0.0:
+        turns = self.builder.constant(1.0)
+        if event.at.part == "once":
+            turns = self._newly(self._before[event.at.name], self.observed[event.at.name].values[0], event.at.place)
+        constant, of_the_day = self.builder.constant, [each.time for one in so_far for each in one.due.values()]
+
+        def due(pay: Pay) -> Due:
+            day = dated.due[pay]
+            return Due(self.builder.leaf(Leaf(LeafKind.DISCOUNT, end=day.time)), constant(day.time), day, (day.time,))
+
+        happens = self._carry_out(event, occasion.day, turns, condition, scene, due=due,
+                                  otherwise_due=lambda: constant(max(of_the_day or [occasion.day.time])))
+        if occasion.day.time <= 0.0:
             held = self.builder.number(happens)
             self.state.events.append(PastEvent(event, occasion.day, None if held is None else bool(held)))
-        does = self._branch(event.then, dated, happens, scene)
-        if event.otherwise:
-            opposite = self.builder.emit(Op.NOT, condition, place=event.place)
-            fails = self.builder.emit(Op.AND, self.alive, opposite, place=event.place)
-            does_not = self._branch(event.otherwise, dated, fails, scene)
-        else:
-            does_not = _Branch(self.settable)
-        self._merge(condition, does.values, does_not.values)
-        for branch, flag in ((does, condition), (does_not, self.builder.emit(Op.NOT, condition))):
-            if branch.ends:
-                self._end(flag, branch.due, so_far)
 
-    def _branch(self, actions: Iterable[Action], dated: DatedEvent, flag: int, scene: Scene) -> _Branch:
+    def _carry_out(self, event: Event, day: Day | Span, turns: int, condition: int, scene: Scene, *,
+                   due: Callable[[Pay], Due], otherwise_due: Callable[[], int]) -> int:
+        """What an event does where it `turns`, by its condition; the flag of its happening. `otherwise_due` gives the
+        time to which the contract lives if it ends here and the branch itself pays nothing."""
+        emit = self.builder.emit
+        chosen = emit(Op.AND, turns, condition, place=event.place)
+        happens = emit(Op.AND, self.alive, chosen, place=event.place)
+        if event.name:
+            self.ledger.happened(event.name, day, happens)
+        does = self._branch(event.then, event, day, happens, scene, due)
+        flags = [(does, chosen)]
+        values = self._merged(chosen, does.values, self.settable)
+        if event.otherwise:
+            other = emit(Op.AND, turns, emit(Op.NOT, condition, place=event.place), place=event.place)
+            fails = emit(Op.AND, self.alive, other, place=event.place)
+            does_not = self._branch(event.otherwise, event, day, fails, scene, due)
+            flags.append((does_not, other))
+            values = self._merged(other, does_not.values, values)
+        self.settable = values
+        for branch, flag in flags:
+            if branch.ends:
+                self._end(event, day, flag, branch.due, otherwise_due)
+        return happens
+
+    def _branch(self, actions: Iterable[Action], event: Event, day: Day | Span, flag: int, scene: Scene,
+                due: Callable[[Pay], Due]) -> _Branch:
         """Carry out one side of an event, which is taken where `flag`. `end` leaves the rest of it undone."""
         branch = _Branch(dict(self.settable))
         if self.builder.number(flag) == 0.0:
             return branch
-        day = dated.occasion.day
-        scene = Scene(scene.spot, lambda name: self._running(name, day, branch.values), scene.occasion,
-                      scene.remembered)
+        scene = replace(scene, running=lambda name: self._running(name, day, branch.values))
         for action in actions:
             match action:
                 case Deliver():
-                    self._deliver(action, dated.event.place, dated.occasion.day, dated.due[action], flag, scene)
-                    branch.due.append(dated.due[action].time)
+                    if scene.occasion is None:
+                        raise Unreadable(action.place, AT_A_HIT)
+                    when = due(action)
+                    self._deliver(action, event.place, scene.occasion.day, when, flag, scene)
+                    branch.due.append(when.time)
                 case Pay():
-                    due, amount = dated.due[action], self.formulas.one(action.amount, scene)
-                    self._pay(action, Payment(action.leg, action.part, dated.event.place, day, due, flag, amount))
-                    self._accrue(action, dated.occasion, amount, flag)
-                    branch.due.append(due.time)
+                    amount, when = self.formulas.one(action.amount, scene), due(action)
+                    self._pay(action, Payment(action.leg, action.part, event.place, day, when, flag, amount))
+                    if scene.occasion:
+                        self._accrue(action, scene.occasion, amount, flag)
+                    branch.due.append(when.time)
                 case Assign(values=pairs):
                     branch.values.update({name: self.formulas.read(value, scene) for name, value in pairs})
                 case End():
@@ -331,7 +433,7 @@ class _Walk:
         if fixed is not None:
             self.state.accruing.append(Accruing(pay, occasion, since, fixed))
 
-    def _deliver(self, action: Deliver, event: Place, day: Day, due: Day, flag: int, scene: Scene) -> None:
+    def _deliver(self, action: Deliver, event: Place, day: Day, due: Due, flag: int, scene: Scene) -> None:
         """Shares are worth their level on the delivery date. Of each note whole ones are delivered and the fraction is
         paid in cash, at the level of the day on which it was decided, as far as their number is fixed."""
         emit, constant, contract = self.builder.emit, self.builder.constant, self.dated.contract
@@ -349,14 +451,14 @@ class _Walk:
             if number is not None:
                 whole = math.floor(number * contract.lot * (1.0 + 1e-12)) / contract.lot
                 if day.time <= 0.0 and self.builder.number(flag) == self.builder.number(taken) == 1.0:
-                    self.state.deliveries.append(Delivery(action, asset, day, due, whole * contract.lot,
+                    self.state.deliveries.append(Delivery(action, asset, day, due.latest, whole * contract.lot,
                                                           (number - whole) * contract.lot))
-            if due.time < 0.0:
+            if due.latest.time < 0.0:
                 continue
             if number is None:
-                value = emit(Op.MUL, shares[asset], self.observations.level(asset, due), place=action.place)
+                value = emit(Op.MUL, shares[asset], self.observations.level(asset, due.latest), place=action.place)
             else:
-                value = emit(Op.ADD, emit(Op.MUL, constant(whole), self.observations.level(asset, due)),
+                value = emit(Op.ADD, emit(Op.MUL, constant(whole), self.observations.level(asset, due.latest)),
                              emit(Op.MUL, constant(number - whole), self.observations.level(asset, day)))
             worth.append(emit(Op.SELECT, taken, value, constant(0.0), place=action.place))
         if worth:
@@ -365,31 +467,27 @@ class _Walk:
 
     def _pay(self, pay: Pay, payment: Payment) -> None:
         emit = self.builder.emit
+        emit, due = self.builder.emit, payment.due
         past = payment.decided.time <= 0.0 and self.builder.number(payment.flag) == 1.0
         fixed = self.formulas.fixed(payment.amount) if past else None
         if fixed is not None:
-            self.state.payments.append(Settled(pay, payment.decided, payment.due, fixed))
-        if payment.due.time < 0.0:  # paid already
+            self.state.payments.append(Settled(pay, payment.decided, due.latest, fixed))
+        if due.latest.time < 0.0:  # paid already
             return
-        discount = self.builder.leaf(Leaf(LeafKind.DISCOUNT, end=payment.due.time))
-        present = emit(Op.MUL, payment.amount, discount, place=pay.place)
+        present = emit(Op.MUL, payment.amount, due.discount, place=pay.place)
         paid = emit(Op.SELECT, payment.flag, present, self.builder.constant(0.0), place=pay.place)
         self.ledger.pay(pay, paid, payment, settled=fixed is not None)
 
-    def _merge(self, condition: int, yes: dict[str, Values], no: dict[str, Values]) -> None:
-        for name, value in yes.items():
-            if value != no[name]:
-                self.settable[name] = self.formulas.spread(Op.SELECT, (condition,), value, no[name])
-            else:
-                self.settable[name] = value
+    def _merged(self, flag: int, yes: dict[str, Values], no: dict[str, Values]) -> dict[str, Values]:
+        """The settable values: those of one branch where its flag holds, else the others."""
+        return {name: value if value == no[name] else self.formulas.spread(Op.SELECT, (flag,), value, no[name])
+                for name, value in yes.items()}
 
-    def _end(self, flag: int, due: Sequence[float], so_far: Sequence[DatedEvent]) -> None:
+    def _end(self, event: Event, day: Day, flag: int, due: Sequence[int], otherwise: Callable[[], int]) -> None:
         """End where `flag`. Its life runs to the branch's own payments, else to the day's, else to the day."""
-        event, day = so_far[-1].event, so_far[-1].occasion.day
-        of_the_day = [payment.time for dated in so_far for payment in dated.due.values()]
         emit = self.builder.emit
         ends = emit(Op.AND, self.alive, flag, place=event.place)
-        self.ledger.ended(day, ends, max(due or of_the_day or [day.time]))
+        self.ledger.ended(day, ends, self.builder.fold(Op.MAX, due) if due else otherwise())
         if day.time <= 0.0 and self.builder.number(ends) == 1.0:
             self.state.ended = day
         self.alive = emit(Op.AND, self.alive, emit(Op.NOT, flag), place=event.place)

@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from mcx.tape.ops import OPS, Op
-from mcx.tape.program import Leaf, LevelKey, Tape
+from mcx.tape.ops import ANY, OPS, Op
+from mcx.tape.program import Leaf, LevelKey, Tape, Unhit
 
 PAYLOADS: dict[Op, type] = {
     Op.CONSTANT: float,
@@ -11,6 +11,8 @@ PAYLOADS: dict[Op, type] = {
     Op.LEVEL: LevelKey,
     Op.LOW: LevelKey,
     Op.HIGH: LevelKey,
+    Op.UNHIT: Unhit,
+    Op.MOMENT: LevelKey,
     Op.NORMAL: int,
     Op.UNIFORM: int,
 }
@@ -40,7 +42,7 @@ def problems(tape: Tape) -> list[str]:
     found: list[str] = []
     for number, step in enumerate(tape.instructions):
         name = f"v{number} ({step.op.name})"
-        if len(step.operands) != OPS[step.op].arity:
+        if OPS[step.op].arity != ANY and len(step.operands) != OPS[step.op].arity:
             found.append(f"{name} has {len(step.operands)} operands, not {OPS[step.op].arity}")
         if not all(0 <= k < number for k in step.operands):
             found.append(f"{name} reads a value that is not defined before it")

@@ -1,8 +1,9 @@
-"""Continuous watching: which extreme of which asset decides a formula, and what is refused.
+"""Continuous watching: a formula at its highest or lowest over a stretch of time, from the extremes of the levels.
 
 A formula that rises with one asset's level is lowest at that asset's minimum and highest at its maximum, and a
-condition is a formula of 0 and 1: `ever` is its highest value, `always` its lowest. So one rule serves all four kinds
-of running value: find the asset, find the direction, read the formula at the extreme.
+condition is a formula of 0 and 1: `ever` is its highest value, `always` its lowest. The highest of several parts is
+the highest of each part's highest, whichever assets and sides they look at; what needs several levels at one moment
+in any other way has no such answer and is refused.
 """
 
 from __future__ import annotations
@@ -12,24 +13,23 @@ from collections.abc import Callable, Iterable
 from dataclasses import dataclass, replace
 
 from mcx.checked.formula import Binary, Call, Formula, IfElse, Name, OfAsset, Unary, walk
-from mcx.checked.payoff import Running
 from mcx.faults import Fault, Place
-from mcx.tape.formulas import Formulas, Scene, Unreadable
+from mcx.tape.formulas import Formulas, Scene, Unreadable, Values
 from mcx.tape.ops import Op
-from mcx.tape.program import Tape
+from mcx.tape.program import Barrier, Tape
 from mcx.tape.rules import evaluate
 
-LATER = "which a later version brings"
-BOTH_SIDES = f"watched from both sides at once: this needs the joint law of minimum and maximum, {LATER}"
-SEVERAL_ASSETS = f"several assets watched at once: this needs their joint law, {LATER}"
-
-
-@dataclass(frozen=True, slots=True)
-class Side:
-    """The asset that is watched, and LOW or HIGH."""
-
-    asset: int
-    level_op: Op
+BOTH_SIDES = ("watched from both sides at once: only joined by 'or' under 'ever', by 'and' under 'always' does each "
+              "side have its own extreme")
+SEVERAL_ASSETS = ("several assets watched at once: the highest of what they are together at one moment is no formula "
+                  "of their own extremes; the worst or best of them, 'any' and 'all' may be")
+JOINTLY_DRAWN = ("several assets watched at once, and their extremes decide more than what is paid (they are compared "
+                 "with something that is not fixed, or a formula that is no sum of payments): their joint law is not "
+                 "known; watch them on dates")
+HIGHEST = {"highest": True, "ever": True, "lowest": False, "always": False}
+RISING = {"exp": Op.EXP, "log": Op.LOG, "sqrt": Op.SQRT}
+JOINS = {"best": (Op.MAX, True), "worst": (Op.MIN, False), "any": (Op.OR, True), "all": (Op.AND, False),
+         "max": (Op.MAX, True), "min": (Op.MIN, False)}
 
 
 @dataclass(frozen=True, slots=True)
@@ -43,39 +43,120 @@ class Shape:
     direction: int = 0
 
 
-def watched_side(running: Running, formulas: Formulas) -> Side:
-    """Which extreme decides a continuously watched running value; raises Unreadable where it is not that simple."""
-    shapes = _Shapes(formulas).of(running.formula)
-    assets = frozenset().union(*(shape.assets for shape in shapes))
-    if len(assets) > 1:
-        raise Unreadable(running.place, SEVERAL_ASSETS)
-    if not assets:
-        raise Unreadable(running.place, "a continuous watch needs a formula of an asset's level")
-    directions = {shape.direction for shape in shapes} - {0}
-    if len(directions) > 1:
-        raise Unreadable(running.place, BOTH_SIDES)
-    rises = 1 in directions
-    wants_highest = running.how in ("highest", "ever")
-    return Side(next(iter(assets)), Op.HIGH if rises == wants_highest else Op.LOW)
+class Extremes:
+    """Reads formulas at their highest or lowest. `extreme(asset, op)` gives the value of the LOW or HIGH so far."""
+
+    def __init__(self, formulas: Formulas, extreme: Callable[[int, Op], int]):
+        self.formulas, self.extreme = formulas, extreme
+        self.shapes = _Shapes(formulas)
+
+    def read(self, formula: Formula, highest: bool) -> Values:
+        """The values of a formula at their highest, or lowest; raises Unreadable where extremes do not say it."""
+        if not self.shapes.moves(formula):
+            return self.formulas.read(formula, Scene(spot=_not_fixed, running=_not_fixed))
+        try:
+            shapes = self.shapes.of(formula)
+        except Unreadable as trouble:
+            return self._apart(formula, highest, trouble)
+        if all(len(shape.assets) == 1 for shape in shapes):
+            return self._simple(formula, shapes, highest)
+        return self._apart(formula, highest, Unreadable(formula.place, SEVERAL_ASSETS))
+
+    def _simple(self, formula: Formula, shapes: tuple[Shape, ...], highest: bool) -> Values:
+        """A formula of one asset that rises or falls, or one such for each asset: read at the extremes."""
+        found = [self.extreme(*shape.assets, Op.HIGH if (shape.direction > 0) is highest else Op.LOW)
+                 for shape in shapes]
+        spots = tuple(found) if len(found) > 1 else tuple(found) * len(self.formulas.contract.assets)
+        return self.formulas.read(formula, Scene(spot=lambda _: spots, running=_not_fixed))
+
+    def _apart(self, formula: Formula, highest: bool, trouble: Unreadable) -> Values:
+        """A formula whose parts have extremes of their own."""
+        spread, place = self.formulas.spread, formula.place
+        match formula:
+            case Name(name=name) if name in self.formulas.lets:
+                return self.read(self.formulas.lets[name], highest)
+            case Unary(symbol=symbol, operand=operand):
+                return spread(Op.NEG if symbol == "-" else Op.NOT, self.read(operand, not highest), place=place)
+            case Binary():
+                return self._binary(formula, highest, trouble)
+            case IfElse():
+                known = self.shapes.decided(formula)
+                return self.read(formula.yes if known else formula.no, highest)
+            case Call():
+                return self._call(formula, highest, trouble)
+            case OfAsset(operand=operand):
+                values = self.read(operand, highest)
+                return values if len(values) == 1 else (values[self.formulas.asset_number(formula)],)
+        raise trouble
+
+    def _binary(self, formula: Binary, highest: bool, trouble: Unreadable) -> Values:
+        left, right, place, symbol = formula.left, formula.right, formula.place, formula.symbol
+        moving = [self.shapes.moves(part) for part in (left, right)]
+        if symbol in ("and", "or"):
+            if not moving[0] and self.shapes.settles(left, symbol):
+                return self.read(left, highest)
+            if all(moving) and (symbol == "or") is not highest:
+                raise trouble
+            parts = self.read(left, highest), self.read(right, highest)
+            return self.formulas.spread(Op.OR if symbol == "or" else Op.AND, *parts, place=place)
+        if all(moving):
+            raise trouble
+        if symbol in (">", ">="):
+            left, right, moving, symbol = right, left, moving[::-1], symbol.replace(">", "<")
+        match symbol:
+            case "<" | "<=":
+                op, falls = Op.LT if symbol == "<" else Op.LE, moving[0]
+            case "+":
+                op, falls = Op.ADD, False
+            case "-":
+                op, falls = Op.SUB, moving[1]
+            case "*" | "/" if symbol == "*" or moving[0]:
+                op, falls = Op.MUL if symbol == "*" else Op.DIV, self.shapes.sign(right if moving[0] else left) < 0
+            case _:
+                raise trouble
+        parts = [self.read(part, highest is not (falls and moves)) for part, moves in zip((left, right), moving)]
+        return self.formulas.spread(op, *parts, place=place)
+
+    def _call(self, formula: Call, highest: bool, trouble: Unreadable) -> Values:
+        name, place, spread = formula.function, formula.place, self.formulas.spread
+        first, *others = formula.arguments
+        moving = [argument for argument in formula.arguments if self.shapes.moves(argument)]
+        if name in RISING:
+            return spread(RISING[name], self.read(first, highest), place=place)
+        if name == "abs" and highest:
+            return spread(Op.MAX, self.read(first, True), spread(Op.NEG, self.read(first, False)), place=place)
+        if name == "clip" and moving == [first]:
+            low, high = (self.read(other, highest) for other in others)
+            return spread(Op.MIN, spread(Op.MAX, self.read(first, highest), low, place=place), high, place=place)
+        if name in JOINS:
+            op, wanted = JOINS[name]
+            over_assets = name not in ("min", "max")
+            if wanted is not highest and (over_assets or len(moving) > 1):
+                raise trouble
+            parts = [self.read(argument, highest) for argument in formula.arguments]
+            if over_assets:
+                return (self.formulas.builder.fold(op, parts[0], place),)
+            joined = parts[0]
+            for part in parts[1:]:
+                joined = spread(op, joined, part, place=place)
+            return joined
+        raise trouble
 
 
 def conflicts(tape: Tape) -> list[Fault]:
-    """Watches of the tape whose joint law is not known: overlapping in time, of one asset from both sides or of
-    several assets. Whether they are read by the same payment does not matter: the paths are shared."""
-    stretches = sorted(
-        (step.payload.start, step.payload.time, step.payload.asset, step.op, step.place)
-        for step in tape.instructions
-        if step.op in (Op.LOW, Op.HIGH)
-    )
+    """Extremes of different assets that would have to be drawn for one time: their joint law is not known."""
+    places: dict[Barrier, Place] = {}
+    for step in tape.instructions:
+        if step.op in (Op.LOW, Op.HIGH):
+            places.setdefault(Barrier(step.op, step.payload), step.place)
     faults = []
-    latest: dict[tuple[int, Op], tuple[float, Place]] = {}  # until when each side of each asset was watched
-    for start, end, asset, op, place in stretches:
-        for (other, side), (until, earlier) in latest.items():
-            if (other, side) != (asset, op) and start < until:
-                text = BOTH_SIDES if other == asset else SEVERAL_ASSETS
-                faults.append(Fault(max(place, earlier), text))
-        if (asset, op) not in latest or end > latest[asset, op][0]:
-            latest[asset, op] = (end, place)
+    latest: dict[int, tuple[float, Place]] = {}  # until when each asset was watched
+    for one in sorted(places, key=lambda barrier: barrier.order):
+        asset, place = one.key.asset, places[one]
+        faults += [Fault(max(place, earlier), JOINTLY_DRAWN) for other, (until, earlier) in latest.items()
+                   if other != asset and one.key.start < until]
+        if asset not in latest or one.key.time > latest[asset][0]:
+            latest[asset] = (one.key.time, place)
     return sorted(set(faults))
 
 
@@ -87,7 +168,7 @@ class _Shapes:
         self.assets = len(formulas.contract.assets)
 
     def of(self, formula: Formula) -> tuple[Shape, ...]:
-        if not self._moves(formula):
+        if not self.moves(formula):
             return self._fixed(formula)
         match formula:
             case Name(name="spot"):
@@ -99,11 +180,7 @@ class _Shapes:
             case Binary(symbol=symbol):
                 return self._binary(formula, symbol)
             case IfElse():
-                condition = self.of(formula.condition)
-                if any(shape.assets for shape in condition) or len(condition) > 1:
-                    raise Unreadable(formula.place, "a conditional that depends on the level cannot be watched "
-                                                    "continuously")
-                return self.of(formula.yes if condition[0].low else formula.no)
+                return self.of(formula.yes if self.decided(formula) else formula.no)
             case Call():
                 return self._call(formula)
             case OfAsset():
@@ -111,11 +188,30 @@ class _Shapes:
                 return shapes if len(shapes) == 1 else (shapes[self.formulas.asset_number(formula)],)
         raise Unreadable(formula.place, "only a formula of today's level can be watched continuously")
 
-    def _moves(self, formula: Formula) -> bool:
+    def moves(self, formula: Formula) -> bool:
         """Whether the formula reads a level."""
         names = [part.name for part in walk(formula) if isinstance(part, Name)]
         lets = self.formulas.lets
-        return "spot" in names or any(self._moves(lets[name]) for name in names if name in lets)
+        return "spot" in names or any(self.moves(lets[name]) for name in names if name in lets)
+
+    def decided(self, formula: IfElse) -> bool:
+        """Which branch a conditional takes whatever the levels are."""
+        condition = self.of(formula.condition)
+        if any(shape.assets for shape in condition) or len(condition) > 1:
+            raise Unreadable(formula.place, "a conditional that depends on the level cannot be watched continuously")
+        return bool(condition[0].low)
+
+    def settles(self, left: Formula, symbol: str) -> bool:
+        """Whether the first part of an `and` or `or` decides it, as in `given(x) and ...`."""
+        shapes = self.of(left)
+        return len(shapes) == 1 and not shapes[0].assets and bool(shapes[0].low) is (symbol == "or")
+
+    def sign(self, formula: Formula) -> int:
+        """The sign of a part that is fixed; raises Unreadable where it differs between assets."""
+        signs = {1 if shape.low >= 0.0 else -1 for shape in self.of(formula)}
+        if len(signs) > 1:
+            raise Unreadable(formula.place, "factors of different signs cannot be watched continuously")
+        return signs.pop()
 
     def _fixed(self, formula: Formula) -> tuple[Shape, ...]:
         """The numbers of a part that does not read levels."""
@@ -128,8 +224,8 @@ class _Shapes:
 
     def _binary(self, formula: Binary, symbol: str) -> tuple[Shape, ...]:
         left = self.of(formula.left)
-        if symbol in ("and", "or") and len(left) == 1 and not left[0].assets:  # decided: as `given(x) and ...`
-            return left if bool(left[0].low) is (symbol == "or") else self.of(formula.right)
+        if symbol in ("and", "or") and len(left) == 1 and not left[0].assets:
+            return left if self.settles(formula.left, symbol) else self.of(formula.right)
         right = self.of(formula.right)
         place = formula.place
         match symbol:

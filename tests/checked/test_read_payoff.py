@@ -236,7 +236,7 @@ def test_of_knows_the_contracts_assets():
         ("start: 0}\n  hit", "start: true}\n  hit", "20:57: expected a number under 'start', found a flag"),
         ("at: watched", "at: watched.last", "21:31: 'watched' is of type 'watch' and has no parts; leave out '.last'"),
         ("at: watched", "at: {once: hit}",
-         "21:32: 'once', the moment of a hit, is of a later version and is refused rather than ignored"),
+         "21:32: 'once', the moment of a hit, is for events; a running value is observed on dates or continuously"),
         ("perf < 60%", "perf", "21:15: 'ever' asks about a flag, such as a comparison, found a number"),
         ("highest: perf", "highest: perf > 1",
          "20:26: expected a number under 'highest', found a flag; write (1 if ... else 0)"),

@@ -92,7 +92,8 @@ def test_factors_do_not_depend_on_which_of_them_are_asked_for():
 
 def test_nodes_are_where_drifts_and_vols_change():
     """Every point of a rate, yield, forward and vol curve of the contract's assets, once; each has one of its own here,
-    so that none can be left out unseen. Funding moves no asset, nor does the rate of a currency that none has."""
+    so that none can be left out unseen, and of the contract's discounting, which amounts paid at a hit need; not the rate
+    of a currency that none has."""
     assert MAP.nodes() == (0.5, 1.0, 1.5, 2.0)
     north = replace(MARKET.assets["north"], dividend_yield=curve("zero", {0.7: 0.01, 1.4: 0.02}))
     market = replace(
@@ -101,7 +102,7 @@ def test_nodes_are_where_drifts_and_vols_change():
         funding={"EUR": curve("zero", {0.8: 0.01, 1.8: 0.02})},
         assets=MARKET.assets | {"north": north, "spare": replace(north, vol=curve("vol", {0.1: 0.2, 0.2: 0.2}))},
     )
-    assert MarketMap(market, CONTRACT).nodes() == (0.3, 0.5, 0.7, 1.0, 1.4, 1.5, 2.0, 2.5)
+    assert MarketMap(market, CONTRACT).nodes() == (0.3, 0.5, 0.7, 0.8, 1.0, 1.4, 1.5, 1.8, 2.0, 2.5)
 
 
 def test_an_asset_grows_at_the_rate_of_its_own_currency():

@@ -10,8 +10,10 @@ import numpy as np
 import pytest
 from made_programs import on_rows, outputs_and_sums, program
 
+from mcx.tape.bridges import bridge_corridor, bridge_moment, bridge_range, range_below
 from mcx.tape.ops import OPS, Op
 from mcx.tape.program import ALONE
+from mcx.tape.rules import RULES
 
 NAN, INF = np.nan, np.inf
 
@@ -45,6 +47,10 @@ PLAIN: dict[Op, Callable[..., np.ndarray]] = {
     Op.STEP: lambda x, s, z: x + s * z,
     Op.BRIDGE_LOW: bridge(-1.0),
     Op.BRIDGE_HIGH: bridge(1.0),
+    Op.BRIDGE_CLEAR: lambda d0, d1, v: np.where((d0 > 0) & (d1 > 0), 1.0 - np.exp(-2.0 * d0 * d1 / v), 0.0),
+    Op.BRIDGE_CORRIDOR: bridge_corridor,
+    Op.BRIDGE_RANGE: bridge_range,
+    Op.BRIDGE_MOMENT: bridge_moment,
 }
 SPECIAL = (0.0, -0.0, 1.0, -1.0, 2.0, 0.5, NAN, INF, -INF, 1e-310, 1e300, -3.0)
 
@@ -57,6 +63,17 @@ def operand_rows(op: Op) -> np.ndarray:
     if op in (Op.BRIDGE_LOW, Op.BRIDGE_HIGH):
         rows[2], rows[3] = np.abs(rows[2]), rng.uniform(0.0, 1.0, 64)
         rows[2, :8] = 0.0  # no variance: the ends themselves
+    elif op in (Op.BRIDGE_CLEAR, Op.BRIDGE_CORRIDOR, Op.BRIDGE_RANGE, Op.BRIDGE_MOMENT):
+        rows[2:] = np.abs(rows[2:]) + 0.1
+        rows[2 if op is Op.BRIDGE_RANGE else OPS[op].arity - 1, :4] = 0.0  # no variance
+        if op is Op.BRIDGE_CORRIDOR:
+            rows[:2, 32:] = np.abs(rows[:2, 32:]) * 0.3
+            rows[3, 16:] *= 10.0 ** rng.uniform(-2.0, 1.0, 48)  # short steps and long ones
+            rows[2, 60:] = INF, INF, -1.0, 1e-3
+        elif op is Op.BRIDGE_MOMENT:
+            rows[3] = rng.uniform(0.0, 1.0, 64)
+        elif op is Op.BRIDGE_RANGE:
+            rows[:2], rows[3] = np.abs(rows[:2]), rng.uniform(0.0, 1.0, 64)
     elif op is Op.POW:
         rows[0] = np.abs(rows[0])
     else:
@@ -77,12 +94,16 @@ def check(op: Op, found: np.ndarray, expected: np.ndarray) -> None:
     """Operations of one rounding agree to the last bit, the others to a few units."""
     exact = op not in (Op.EXP, Op.LOG, Op.POW, Op.STEP, Op.BRIDGE_LOW, Op.BRIDGE_HIGH)
     scale = 0.0 if exact else 1e-15
+    if op >= Op.BRIDGE_CLEAR:
+        rtol = 1e-9 if op is Op.BRIDGE_RANGE else 0.0
+        return np.testing.assert_allclose(found, expected, rtol=rtol, atol=1e-14)
     np.testing.assert_allclose(found, expected, rtol=0.0 if exact else 1e-14, atol=scale)
 
 
 def test_every_operation_has_a_plain_meaning_here():
     """No operation of the kernel is left out of these tests."""
-    assert set(PLAIN) == {op for op in Op if op >= Op.ADD}
+    slopes = {Op.CORRIDOR_BY_START, Op.CORRIDOR_BY_WIDTH, Op.CORRIDOR_BY_ENDS, Op.RANGE_BY_START}
+    assert set(PLAIN) == set(RULES) - {Op.LOOKUP} - slopes
 
 
 @pytest.mark.parametrize("op", PLAIN, ids=lambda op: op.name)
@@ -191,3 +212,55 @@ def test_a_sum_is_taken_before_its_row_is_written_again():
     step = moved + 2.0 * rows[1]
     expected = [step.sum(), (step**4).sum(), (step**3).sum(), moved.sum()]
     np.testing.assert_allclose(found, expected, rtol=1e-12)
+
+
+def test_lookup_counts_entries():
+    """The whole part of x counts the entries, which stand one behind the other; beyond them the first or the last."""
+    x = np.resize([-3.0, -0.5, 0.0, 0.9, 1.0, 1.7, 2.0, 2.5, 9.0, 1e300, -1e300], 64)[None]
+    made = program([(Op.LOOKUP, 1, 0, -2, -4)], rows=2, outputs=[1], scalars=[7.0, 10.0, 20.0, 30.0, 8.0])
+    expected = np.array([10.0, 20.0, 30.0])[np.clip(np.floor(x[0]), 0, 2).astype(int)]
+    np.testing.assert_array_equal(on_rows(made, x)[0], expected)
+
+
+def test_drawn_ranges_are_the_quantiles_of_their_law():
+    """What is drawn for u has the probability u below it, from 1e-9 to almost 1, whatever the ends."""
+    rng = np.random.default_rng(552913047)
+    rows = np.array([rng.exponential(size=64), rng.exponential(size=64), 10.0 ** rng.uniform(-9.0, -1e-9, 64)])
+    made = program([(Op.BRIDGE_RANGE, 3, 0, 1, -1, 2)], rows=4, outputs=[3], scalars=[0.7])
+    found = range_below(on_rows(made, rows)[0], rows[0], rows[1], 0.7)
+    np.testing.assert_allclose(found, rows[2], rtol=1e-6, atol=1e-12)
+
+
+@pytest.mark.parametrize("spread", [1e-3, 0.01, 0.049, 0.2, 0.59, 0.61, 3.0])
+def test_corridor_in_every_kind_of_step(spread: float):
+    """Short steps, longer and long ones have loops of their own; bridges along a barrier and from one barrier to the
+    other are where images count."""
+    rng = np.random.default_rng(771320947)
+    near, width = 10.0 ** rng.uniform(-4.0, -0.5, (2, 64)), 0.8
+    rows = np.where(rng.uniform(size=(2, 64)) < 0.5, near, width - near)
+    made = program([(Op.BRIDGE_CORRIDOR, 2, 0, 1, -1, -2)], rows=3, outputs=[2], scalars=[width, spread * width**2])
+    expected = bridge_corridor(rows[0], rows[1], width, spread * width**2)
+    np.testing.assert_allclose(on_rows(made, rows)[0], expected, rtol=0.0, atol=1e-14)
+    assert np.count_nonzero((expected > 1e-10) & (expected < 0.999)) > 5
+
+
+@pytest.mark.parametrize("op", [Op.CORRIDOR_BY_START, Op.CORRIDOR_BY_WIDTH, Op.CORRIDOR_BY_ENDS])
+@pytest.mark.parametrize("spread", [1e-3, 0.02, 0.3, 0.59, 0.61, 3.0])
+def test_slopes_of_a_corridor(op: Op, spread: float):
+    """The images that count in a step are enough, inside and outside; and where the upper barrier is none."""
+    rng = np.random.default_rng(5210773)
+    rows = np.vstack([rng.uniform(-0.1, 0.9, (2, 64)), np.full((1, 64), 0.8)])
+    rows[2, :8] = np.inf
+    made = program([(op, 3, 0, 1, 2, -1)], rows=4, outputs=[3], scalars=[spread * 0.64])
+    expected = RULES[op].value(*rows, spread * 0.64)
+    np.testing.assert_allclose(on_rows(made, rows)[0], expected, rtol=1e-9, atol=1e-10)
+    assert np.count_nonzero(expected) > 5
+
+
+def test_slopes_of_a_range():
+    """Wherever draws come to: the minimum of a bridge is not far below both ends."""
+    rng = np.random.default_rng(30275110)
+    rows = np.array([rng.exponential(size=64), rng.exponential(size=64), rng.uniform(0.01, 0.99, 64)])
+    lines = [(Op.BRIDGE_RANGE, 3, 0, 1, -1, 2), (Op.RANGE_BY_START, 4, 0, 1, -1, 3)]
+    found, slopes = on_rows(program(lines, rows=5, outputs=[3, 4], scalars=[0.7]), rows)
+    np.testing.assert_allclose(slopes, RULES[Op.RANGE_BY_START].value(rows[0], rows[1], 0.7, found), rtol=1e-9)

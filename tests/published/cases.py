@@ -8,7 +8,7 @@ from pathlib import Path
 
 import yaml
 
-GROUPS = ("european", "digital", "asian", "barrier", "lookback", "multi_asset", "cliquet")
+GROUPS = ("european", "digital", "asian", "barrier", "double_barrier", "at_hit", "lookback", "multi_asset", "cliquet")
 
 
 @dataclass(frozen=True)

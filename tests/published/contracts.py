@@ -78,6 +78,21 @@ def barrier(c: dict) -> Terms:
     return "barrier", stated | ({"rebate": c["rebate"]} if c.get("rebate") else {})
 
 
+def barrier_rebate_at_hit(c: dict) -> Terms:
+    name, terms = barrier(c | {"rebate": None})
+    return name, terms | {"rebate_at_hit": c["rebate"]}
+
+
+def double_knock_out(c: dict) -> Terms:
+    stated = {"side": c["kind"], "knock": "out", "strike": c["strike"]}
+    between = {"lower_barrier": c["lower"], "upper_barrier": c["upper"], "watched": always_watched(c)}
+    return "double_barrier", stated | between
+
+
+def cash_at_hit(c: dict) -> Terms:
+    return "touch_at_hit", {key: c[key] for key in ("direction", "barrier", "cash")} | {"watched": always_watched(c)}
+
+
 def lookback_fixed(c: dict) -> Terms:
     return "lookback", {"side": c["kind"], "strike_type": "fixed", "strike": c["strike"], "watched": always_watched(c)}
 
@@ -134,6 +149,9 @@ TERMS: dict[str, Callable[[dict], Terms]] = {
     "asian_geometric_strike_discrete": asian("geometric", "floating"),
     "barrier": barrier,
     "barrier_discrete": barrier,
+    "barrier_rebate_at_hit": barrier_rebate_at_hit,
+    "double_knock_out": double_knock_out,
+    "cash_at_hit": cash_at_hit,
     "lookback_fixed": lookback_fixed,
     "lookback_floating": lookback_floating,
     "lookback_discrete": lookback_floating,
@@ -173,7 +191,7 @@ def contract_text(case: Case) -> str:
     """The contract of a case, one unit (a notional of 1 where the payoff is a percentage)."""
     c = case.contract
     payoff, terms = TERMS[case.formula](c)
-    if "observations" not in terms:
+    if "observations" not in terms and payoff != "touch_at_hit":
         terms = terms | {"expiry": years(c["maturity"])}
     size = "notional: 1" if "notional" in c else "units: 1"
     lines = [f"contract: {case.id}", "currency: USD", size, f"assets: [{', '.join(names(c))}]",

@@ -43,6 +43,8 @@ def assets_for(name: str) -> tuple[str, ...]:
 
 
 def value_for(key: str, terms: dict[str, Term], with_optional: bool) -> str:
+    if key == "knock" and with_optional:  # a rebate at the hit belongs to a knock-out
+        return "out"
     if key in terms:
         term, names = terms[key], BY_NAME if with_optional else BY_NAME | NO_STRIKE
         return names.get(key) or (term.choices[0] if term.type == "choice" else BY_TYPE[term.type])

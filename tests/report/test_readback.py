@@ -187,9 +187,9 @@ def test_decided_parts_of_conditions_are_left_away(kind: str, words: str, tmp_pa
 
 
 def test_watches_that_are_refused_are_said(tmp_path: Path):
-    """A continuous watch on two assets: refused, with the place of the definition, where `price` refuses it too."""
+    """A continuous watch of what two assets are together: refused, with the place of the definition, where `price` refuses it too."""
     payoff = ("assets: 2\nterms: {level: {type: number}, watched: {type: watch}, expiry: {type: date}}\nrunning:\n"
-              "  hit: {ever: worst(spot) < level, at: watched}\n"
+              "  hit: {ever: best(spot) < level, at: watched}\n"
               "events:\n  - at: expiry\n    pay: 0 if hit else 1\n")
     contract = CALL.replace("european", "own").replace("[harbour]", "[harbour, lantern]").replace(
         "{side: call, strike: 100, expiry: 1y}", "{level: 80, watched: {continuous: [0y, 1y]}, expiry: 1y}")

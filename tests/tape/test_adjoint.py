@@ -14,7 +14,7 @@ from strategies import inputs_for, tapes
 from mcx.leaves.market_map import MarketMap
 from mcx.machine.run import run
 from mcx.tape.adjoint import Gradient, finished, leaf_sums, on_paths, sums_of, sweep, with_adjoint
-from mcx.tape.adjoint_rules import ADJOINTS, At, Numbers, Product, Rule
+from mcx.tape.adjoint_rules import ADJOINTS, At, Numbers, Product, Rule, rules_of
 from mcx.tape.builder import Builder
 from mcx.tape.interpret import interpret
 from mcx.tape.ops import OPS, Op
@@ -24,6 +24,7 @@ from mcx.tape.rules import RULES, evaluate
 from mcx.tape.verify import problems
 
 LANES = 50
+SLOPES = (Op.CORRIDOR_BY_WIDTH, Op.CORRIDOR_BY_ENDS, Op.RANGE_BY_START)  # of which no derivative is taken
 DIFFERENTIABLE = [op for op in Op if any(ADJOINTS.get(op, ()))]
 
 
@@ -46,6 +47,13 @@ def operands_of(op: Op) -> np.ndarray:
         rows[2], rows[3] = draws.uniform(0.01, 0.5, LANES), draws.uniform(0.01, 0.99, LANES)
     elif op in (Op.LOG, Op.SQRT, Op.POW, Op.DIV):
         rows = np.abs(rows) + 0.2
+    elif op is Op.BRIDGE_CLEAR:
+        rows = draws.uniform(0.1, 1.0, (3, LANES))
+    elif op in (Op.BRIDGE_CORRIDOR, Op.CORRIDOR_BY_START):  # short steps and long ones
+        rows[2], rows[3] = draws.uniform(0.5, 2.0, LANES), 10.0 ** draws.uniform(-1.5, 0.5, LANES)
+        rows[:2] = rows[2] * draws.uniform(0.05, 0.95, (2, LANES))
+    elif op is Op.BRIDGE_RANGE:
+        rows = draws.uniform(0.1, 1.0, (4, LANES))
     elif op is Op.SELECT:
         rows[0] = rows[0] > 0.0
     return rows
@@ -70,7 +78,8 @@ def off_by(op: Op, rules: tuple[Rule | None, ...], risky: bool) -> float:
 
 def test_the_table_is_complete():
     """Every operation with operands has a rule, or None, for each of them, and nothing else has."""
-    assert set(ADJOINTS) == set(RULES)
+    assert set(ADJOINTS) == set(RULES) - {Op.LOOKUP}  # which has any number
+    assert len(rules_of(Op.LOOKUP, 5)) == 5
     assert all(len(rules) == OPS[op].arity for op, rules in ADJOINTS.items())
 
 
@@ -93,11 +102,38 @@ def test_a_rule_wrong_by_a_thousandth_is_caught(op: Op):
             assert off_by(op, planted, False) > 1e-4
 
 
-@pytest.mark.parametrize("op", [op for op in ADJOINTS if op not in DIFFERENTIABLE], ids=lambda op: op.name)
+@pytest.mark.parametrize("op", [op for op in ADJOINTS if op not in (*DIFFERENTIABLE, *SLOPES, Op.BRIDGE_MOMENT)],
+                         ids=lambda op: op.name)
 def test_what_has_no_rule_is_flat(op: Op):
     """A small move of the operands of a comparison or of logic changes nothing."""
     x = operands_of(op)
     assert np.array_equal(evaluate(op, *x), evaluate(op, *(x + 1e-9)))
+
+
+def test_a_table_gives_its_adjoint_to_the_entry_that_is_counted():
+    """Beyond the table that is the first entry or the last; what counts has no derivative."""
+    x, bar = np.array([-3.0, 0.0, 0.5, 1.0, 1.9, 2.0, 7.0]), np.arange(1.0, 8.0)
+    at = At(Numbers(), (x, 4.0, 5.0, 6.0), np.zeros(7), bar, False)
+    rules = rules_of(Op.LOOKUP, 4)
+    assert rules[0] is None
+    counted = evaluate(Op.LOOKUP, x, 0.0, 1.0, 2.0)
+    for number, rule in enumerate(rules[1:]):
+        np.testing.assert_array_equal(rule(at).left, np.where(counted == number, bar, 0.0))
+
+
+@pytest.mark.parametrize("ends", [(-0.1, 0.3), (0.3, -0.1), (0.0, 0.2), (0.9, 0.2), (0.2, 0.9)])
+@pytest.mark.parametrize("variance", [0.0, 0.04])
+@pytest.mark.parametrize("op", [Op.BRIDGE_CLEAR, Op.BRIDGE_CORRIDOR])
+def test_a_chance_that_is_decided_has_no_derivative(op: Op, variance: float, ends: tuple[float, float]):
+    """Where a barrier is reached at an end, or there is no variance, every part is 0 and none NaN."""
+    operands = (*ends, variance) if op is Op.BRIDGE_CLEAR else (*ends, 0.8, variance)
+    decided = variance == 0.0 or min(ends) <= 0.0 or (op is Op.BRIDGE_CORRIDOR and max(ends) >= 0.8)
+    at = At(Numbers(), tuple(map(np.float64, operands)), evaluate(op, *operands), np.float64(2.0), True)
+    with np.errstate(all="ignore"):
+        parts = [rule(at) for rule in ADJOINTS[op]]
+    found = [part.left * (1.0 if part.right is None else part.right) for part in parts]
+    assert np.isfinite(found).all()
+    assert decided == (np.abs(found).max() == 0.0)
 
 
 @pytest.mark.parametrize(("op", "taken"), [(Op.MIN, 0), (Op.MAX, 0)])

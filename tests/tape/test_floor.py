@@ -27,7 +27,7 @@ def examples(path: Path) -> list[Ready]:
 
 
 def bounds(ready: Ready) -> tuple[float, float]:
-    found = certain(ready.dated)
+    found = certain(ready.dated, MarketMap(ready.market, ready.dated.contract).nodes())
     discount = MarketMap(ready.market, ready.dated.contract).funded_discount
     return found.least(discount).value, found.most(discount).value
 
@@ -67,7 +67,7 @@ def test_a_maximum_that_paths_meet_is_exact(example: str, number: int):
 def test_the_floor_of_a_reverse_convertible_is_its_coupons():
     """12 % a year in quarters whatever happens, the redemption down to nothing; discounted by hand."""
     ready = examples(next(path for path in EXAMPLES if path.stem == "reverse_convertible"))[0]
-    found = certain(ready.dated)
+    found = certain(ready.dated, MarketMap(ready.market, ready.dated.contract).nodes())
     coupons = [payment for payment in found.payments() if payment.leg == "coupon"]
     assert [(payment.least, payment.most) for payment in coupons] == [(pytest.approx(0.03),) * 2] * 4
     assert found.least(lambda time: 1.0).value == pytest.approx(0.12)
@@ -120,7 +120,8 @@ assets:
 
 
 def note(text: str = NOTE) -> Certain:
-    return certain(prepare(text).dated)
+    ready = prepare(text)
+    return certain(ready.dated, MarketMap(ready.market, ready.dated.contract).nodes())
 
 
 def test_a_note_that_is_called_does_not_lose_its_redemption():

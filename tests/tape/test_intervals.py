@@ -12,7 +12,7 @@ from hypothesis import strategies as st
 
 from mcx.tape.builder import Builder
 from mcx.tape.intervals import ANYTHING, BACKWARD, FORWARD, NO, YES, Case, Intervals
-from mcx.tape.ops import OPS, Op
+from mcx.tape.ops import ANY, OPS, Op
 from mcx.tape.program import LevelKey, Output
 from mcx.tape.rules import RULES, evaluate
 from mcx.tape.verify import FLAG_OPERANDS
@@ -36,10 +36,15 @@ def operand(draw: st.DrawFn, flag: bool) -> tuple[float, tuple[float, float]]:
 @st.composite
 def applied(draw: st.DrawFn, op: Op) -> tuple[list[float], list[tuple[float, float]]]:
     """Operands of an operation, each with an interval around it."""
-    drawn = [draw(operand(k in FLAG_OPERANDS.get(op, ()))) for k in range(OPS[op].arity)]
+    count = OPS[op].arity if OPS[op].arity != ANY else 3
+    drawn = [draw(operand(k in FLAG_OPERANDS.get(op, ()))) for k in range(count)]
     values, intervals = [value for value, _ in drawn], [interval for _, interval in drawn]
     if op in (Op.BRIDGE_LOW, Op.BRIDGE_HIGH):
         values[2:], intervals[2:] = [abs(values[2]), 0.3], [(0.0, math.inf), (0.0, 1.0)]
+    if op is Op.BRIDGE_CLEAR:
+        values[2], intervals[2] = abs(values[2]), (0.0, math.inf)
+    if op is Op.LOOKUP:
+        values[0], intervals[0] = abs(values[0]) % 2.0, (0.0, 2.0)
     return values, intervals
 
 

@@ -23,14 +23,17 @@ def execute(program: Program, normals: np.ndarray, uniforms: np.ndarray) -> list
         return rows[operand].copy() if operand >= 0 else program.scalars[-1 - operand]
 
     for op, destination, *sources in program.code.tolist():
-        arity = OPS[Op(op)].arity
+        arity = 3 if op == Op.LOOKUP else OPS[Op(op)].arity
         assert program.draws <= destination < program.rows
         assert destination not in sources[:arity]
         assert not any(sources[arity:])
         assert any(source >= 0 for source in sources[:arity])
         if op in COMMUTATIVE:
             assert sources[0] >= 0
-        rows[destination] = evaluate(Op(op), *(read(source) for source in sources[:arity]))
+        operands = [read(source) for source in sources[:arity]]
+        if op == Op.LOOKUP:
+            operands[1:] = program.scalars[-1 - sources[1] : -sources[2]].tolist()
+        rows[destination] = evaluate(Op(op), *operands)
     return [np.broadcast_to(read(operand), normals.shape[1]) for operand in program.outputs.tolist()]
 
 

@@ -11,8 +11,8 @@ from mcx.tape.rules import RULES, evaluate
 
 
 def test_the_table_is_complete():
-    """Every operation with operands has a rule, and nothing else has."""
-    assert set(RULES) == {op for op, row in OPS.items() if row.arity > 0}
+    """Every operation with operands has a rule but those that are replaced before a tape runs; nothing else has."""
+    assert set(RULES) == {op for op, row in OPS.items() if row.arity != 0} - {Op.UNHIT, Op.MOMENT}
     assert set(OPS) == set(Op)
 
 

@@ -38,10 +38,10 @@ def kinds(found: tuple[Jump, ...]) -> list[str]:
     return [jump.kind for jump in found]
 
 
-def price_jumps(*events, watches=(), assets=("north",), watched=None) -> tuple[Jump, ...]:
+def price_jumps(*events, watches=(), assets=("north",), watched=None, everything_drawn=False) -> tuple[Jump, ...]:
     """What makes the price of a made-up contract jump."""
     dated = made(DATES, events, watches, TERMS, assets=assets, watched=watched)
-    unrolled = unroll(dated, nodes=())
+    unrolled = unroll(dated, nodes=(), everything_drawn=everything_drawn)
     assert not unrolled.faults
     tape = unrolled.tape
     (found,) = jumps(tape, leaf_values(tape), [tape.outputs[0].value])
@@ -176,10 +176,13 @@ def test_memory_and_endings():
 
 
 def test_continuous_watching():
-    """A knock-in watched continuously is a jump, a lookback is none."""
-    watch, span = running("hit", "ever", "spot <= strike"), {"hit": (0.0, 1.0), "low": (0.0, 1.0)}
-    assert kinds(price_jumps(event("end", pay("spot if hit else higher")), watches=[watch], watched=span)) \
-        == ["condition"]
+    """A knock-in watched continuously is a jump where it is drawn, and none as a probability; a lookback is none."""
+    watch, span = running("hit", "ever", "spot <= 0.8 * strike"), {"hit": (0.0, 1.0), "low": (0.0, 1.0)}
+    knocked = event("end", pay("spot if hit else higher"))
+    assert price_jumps(knocked, watches=[watch], watched=span) == ()
+    assert kinds(price_jumps(knocked, watches=[watch], watched=span, everything_drawn=True)) == ["condition"]
+    digital = event("end", pay("spot if hit and spot > higher else higher"))
+    assert kinds(price_jumps(digital, watches=[watch], watched=span)) == ["condition"]
     lookback = running("low", "lowest", "spot")
     assert price_jumps(event("end", pay("spot - low")), watches=[lookback], watched=span) == ()
 
@@ -197,20 +200,36 @@ def test_several_assets():
 LIBRARY = {
     "european": set(), "asian": set(), "lookback": set(), "basket_option": set(), "cliquet": set(), "airbag": set(),
     "reverse_convertible": set(), "variance_swap": set(), "exchange_option": set(), "capital_protection": set(),
-    "digital": {"digital"}, "barrier": {"barrier"}, "autocall": {"autocall"}, "touch": {"touch"},
-    "barrier_reverse_convertible": {"barrier_reverse_convertible"}, "range_accrual": {"range_accrual"},
-    "snowball_autocall": {"snowball_autocall"}, "bonus": {"bonus"}, "shark_fin": {"shark_fin"},
+    "barrier": {"barrier"}, "double_barrier": {"double_barrier"}, "touch": {"touch"}, "double_touch": set(),
+    "barrier_reverse_convertible": {"barrier_reverse_convertible"}, "bonus": {"bonus"}, "shark_fin": set(),
+    "double_no_touch_note": set(), "worst_of_watched": {"autocall"}, "touch_at_hit": {"touch_at_hit"},
+    "digital": {"digital"}, "autocall": {"autocall"},
+    "range_accrual": {"range_accrual"}, "snowball_autocall": {"snowball_autocall"},
 }
 
 
 @pytest.mark.parametrize("name", LIBRARY)
 def test_the_library(name: str):
-    """Digitals, barriers and autocalls jump, at a line of their definition; Asians, lookbacks and the like do not."""
-    request = load([EXAMPLES / f"{name}.yaml"])
+    """Digitals and autocalls jump, at a line of their definition, and amounts paid at a hit; Asians and the like do not,
+    nor do continuous barriers, which enter by their chance."""
+    assert {place for places in jumps_of_example(name) for place in places} == LIBRARY[name]
+
+
+@pytest.mark.parametrize(("name", "number"), [("barrier", 0), ("barrier", 2), ("double_barrier", 0), ("touch", 0), ("bonus", 0),
+                                              ("barrier_reverse_convertible", 2), ("worst_of_watched", 1)])
+def test_continuous_barriers_of_the_library(name: str, number: int):
+    """Watched on dates the same definitions jump."""
+    assert jumps_of_example(name)[number] == set()
+
+
+def jumps_of_example(name: str) -> list[set[str]]:
+    """For each contract of an example the definitions at whose lines its price jumps."""
+    request, found = load([EXAMPLES / f"{name}.yaml"]), []
     for number, contract in enumerate(request.contracts):
         ready = ready_of(request, number)
-        (found,) = price_jumps_of(ready, MarketMap(ready.market, contract).values(ready.unrolled.tape.leaves))
-        assert {Path(jump.place.file).stem for jump in found} == LIBRARY[name]
+        (price,) = price_jumps_of(ready, MarketMap(ready.market, contract).values(ready.unrolled.tape.leaves))
+        found.append({Path(jump.place.file).stem for jump in price})
+    return found
 
 
 # A search for jumps

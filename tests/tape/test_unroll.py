@@ -340,7 +340,61 @@ def test_continuous_watches_read_the_deciding_extreme(how: str, what: str, side:
     found = results(dated, {side: {(0, 0.0, 1.0): extreme}, 0: {1.0: 100.0}})
     assert found["price"] == pytest.approx(discounted((value, 1.0)))
     (note,) = unroll(dated, nodes=()).watches
-    assert (note.asset, note.side, note.law) == ("north", side, "exact")
+    assert (note.sides, note.law) == ((("north", side),), "exact")
+    assert note.drawn is (how in ("lowest", "highest"))
+
+
+@pytest.mark.parametrize(
+    ("how", "what", "value"),
+    [
+        ("ever", "spot < 80 or spot > 135", 1.0),
+        ("ever", "spot < 60 or spot >= 130", 1.0),
+        ("ever", "spot < 60 or spot > 130", 0.0),
+        ("always", "70 <= spot and spot <= 130", 1.0),
+        ("always", "spot > 70 and spot < 131", 0.0),
+        ("ever", "not (71 < spot and spot < 131)", 1.0),
+        ("ever", "abs(spot - 100) >= 30", 1.0),
+        ("ever", "abs(log(spot / 100)) > 0.36", 0.0),
+        ("highest", "max(spot - 100, 90 - spot)", 30.0),
+        ("lowest", "min(2 * spot, 300 - spot)", 140.0),
+    ],
+)
+def test_both_sides_of_one_asset(how: str, what: str, value: float):
+    """The highest of several parts is the highest of each part's own: minimum and maximum enter the same value."""
+    paid = "1 if x else 0" if how in ("ever", "always") else "x"
+    dated = made({"expiry": (1.0,)}, [event("expiry", pay(paid))], [running("x", how, what, "expiry")],
+                 watched=WATCHED)
+    found = results(dated, {"low": {(0, 0.0, 1.0): 70.0}, "high": {(0, 0.0, 1.0): 130.0}, 0: {1.0: 100.0}})
+    assert found["price"] == pytest.approx(discounted((value, 1.0)))
+
+
+@pytest.mark.parametrize(
+    ("how", "what", "value"),
+    [
+        ("ever", "worst(spot / initial) < 0.5", 0.0),
+        ("ever", "worst(spot / initial) < 0.75", 1.0),
+        ("ever", "any(spot >= 130)", 1.0),
+        ("always", "all(spot > 55)", 1.0),
+        ("always", "worst(spot) > 60", 0.0),
+        ("ever", "of(spot, south) < 65 or of(spot, north) > 140", 1.0),
+        ("lowest", "worst(spot / initial)", 60.0 / 90.0),
+        ("highest", "best(spot / initial) * 2 - 1", 1.6),
+    ],
+)
+def test_several_assets_each_by_its_own_extreme(how: str, what: str, value: float):
+    """The worst's minimum is the least of the minima, whichever moments they come at."""
+    paid = "1 if x else 0" if how in ("ever", "always") else "x"
+    dated = made({"expiry": (1.0,)}, [event("expiry", pay(paid))], [running("x", how, what, "expiry")],
+                 terms={"initial": figures(100.0, 90.0)}, assets=("north", "south"), watched=WATCHED)
+    levels = {"low": {(0, 0.0, 1.0): 70.0, (1, 0.0, 1.0): 60.0}, "high": {(0, 0.0, 1.0): 130.0, (1, 0.0, 1.0): 95.0}}
+    if how in ("lowest", "highest"):  # drawn: refused for two assets
+        return assert_refused(dated, "several assets")
+    assert results(dated, levels | {0: {1.0: 100.0}, 1: {1.0: 90.0}})["price"] == pytest.approx(discounted((value, 1.0)))
+
+
+def assert_refused(dated, words: str) -> None:
+    """The tape refuses a contract, with these words."""
+    assert words in texts(unroll(dated, nodes=()))[0]
 
 
 def test_a_watch_read_inside_its_window_covers_up_to_that_day():
@@ -356,9 +410,12 @@ def test_a_watch_read_inside_its_window_covers_up_to_that_day():
 @pytest.mark.parametrize(
     ("what", "assets", "words"),
     [
-        ("spot < 80 or spot > 120", 1, "the joint law of minimum and maximum"),
-        ("abs(spot - 100) > 20", 1, "the joint law of minimum and maximum"),
-        ("worst(spot) < 80", 2, "several assets"),
+        ("80 < spot and spot < 120", 1, "from both sides"),
+        ("abs(spot - 100) < 20", 1, "from both sides"),
+        ("best(spot) < 80", 2, "several assets"),
+        ("mean(spot) < 80", 2, "several assets"),
+        ("all(spot < 80)", 2, "several assets"),
+        ("of(spot, north) < of(spot, south)", 2, "several assets"),
         ("spot < level_then", 1, "'level_then' is not fixed"),
         ("spot == 80", 1, "cannot be watched continuously"),
         ("1 < 2", 1, "needs a formula of an asset's level"),
@@ -382,19 +439,37 @@ def watches(*windows: tuple[str, float, float], read: str) -> Unrolled:
                        watched=watched), nodes=())
 
 
-def test_two_watches_without_a_joint_law_are_refused_where_they_overlap():
-    """Both sides of one asset, or two assets, over one stretch of time; one after the other they are exact."""
-    read = "1 if x0 and x1 else 0"
+def test_watches_that_overlap():
+    """Two sides of one asset are exact, two assets are between bounds where one payment joins them; one after the
+    other, or in payments of their own, they are exact."""
+    both, each = "1 if x0 and x1 else 0", "(1 if x0 else 0) + (1 if x1 else 0)"
     low, high, other = "of(spot, north) < 80", "of(spot, north) > 120", "of(spot, south) < 80"
-    assert "minimum and maximum" in texts(watches((low, 0.0, 1.0), (high, 0.5, 2.0), read=read))[0]
-    assert "several assets" in texts(watches((low, 0.0, 1.0), (other, 0.5, 2.0), read=read))[0]
-    assert watches((low, 0.0, 1.0), (high, 1.0, 2.0), read=read).faults == ()
-    assert watches((low, 0.0, 1.0), ("of(spot, north) < 70", 0.5, 2.0), read=read).faults == ()
-    inner = watches((low, 0.0, 1.0), ("of(spot, north) < 70", 0.2, 0.4), (other, 0.6, 0.8),
-                    read="1 if (x0 and x1) and x2 else 0")
-    assert "several assets" in texts(inner)[0]  # a watch inside another does not end it
-    unread = watches((low, 0.0, 1.0), (high, 0.5, 2.0), read="1 if x0 else 0")
-    assert unread.faults == () and [note.law for note in unread.watches] == ["exact", "unread"]
+
+    def laws(*windows: tuple[str, float, float], read: str) -> list[str]:
+        found = watches(*windows, read=read)
+        assert found.faults == ()
+        return [note.law for note in found.watches]
+
+    assert laws((low, 0.0, 1.0), (high, 0.5, 2.0), read=both) == ["exact", "exact"]
+    assert laws((low, 0.0, 1.0), (other, 0.5, 2.0), read=both) == ["bracketed", "bracketed"]
+    assert laws((low, 0.0, 1.0), (other, 1.0, 2.0), read=both) == ["exact", "exact"]
+    assert laws((low, 0.0, 1.0), (other, 0.5, 2.0), read=each) == ["exact", "exact"]
+    assert laws((low, 0.0, 1.0), (high, 0.5, 2.0), read="1 if x0 else 0") == ["exact", "unread"]
+    inner = laws((low, 0.0, 1.0), ("of(spot, north) < 70", 0.2, 0.4), (other, 0.6, 0.8),
+                 read="1 if (x0 and x1) and x2 else 0")
+    assert inner == ["bracketed"] * 3  # a watch inside another does not end it
+
+
+def test_flags_that_decide_more_than_payments_are_drawn():
+    """A count of flags is a sum of events; compared with a number it is none: then the extremes are drawn."""
+    low, high = ("of(spot, north) < 80", 0.0, 1.0), ("of(spot, north) > 120", 0.5, 2.0)
+    counted = watches(low, high, read="2 * (1 if x0 else 0) - (1 if x1 else 0)")
+    assert [note.drawn for note in counted.watches] == [False, False] and counted.tape.uniforms == 0
+    compared = watches(low, high, read="max((1 if x0 else 0) + (1 if x1 else 0) - 1, 0)")
+    assert [note.drawn for note in compared.watches] == [True, True]
+    assert {Op.BRIDGE_LOW, Op.BRIDGE_HIGH, Op.BRIDGE_RANGE} <= {step.op for step in compared.tape.instructions}
+    other = ("of(spot, south) < 80", 0.5, 2.0)
+    assert "several assets" in texts(watches(low, other, read="max((1 if x0 else 0) + (1 if x1 else 0), 1)"))[0]
 
 
 def test_faults_are_listed_together_and_once():
