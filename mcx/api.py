@@ -206,14 +206,14 @@ def replay(
         raise RequestError(f"{file}: the record has {len(runs)} requests for the {len(dated)} contracts in its inputs")
     asked = [precision(each["paths"], None, None) for each in runs]
     seeds = [_seed(each["seed"]) for each in runs]
+    brackets = [each.get("bracket") for each in stored["results"]]
+    pieces = [bracket and bracket["pieces"] for bracket in brackets]
     if stored.get("verb", "price") == "greeks":
         from mcx.estimators.wishes import wish_of
 
         wishes = [wish_of(*(each[key] for key in ("estimator", "bump", "assets", "spot_moves", "vol_moves"))) for each in runs]
-        results = _greeks(made, dated, wishes, asked, seeds, threads, progress, notice).contracts
+        results = _greeks(made, dated, wishes, asked, seeds, threads, progress, notice, pieces).contracts
     else:
-        brackets = [each.get("bracket") for each in stored["results"]]
-        pieces = [bracket and bracket["pieces"] for bracket in brackets]
         table = _price(made, dated, asked, seeds, threads, progress, notice, pieces)
         if table.interrupted:
             raise KeyboardInterrupt
@@ -310,18 +310,20 @@ def _greeks(
     threads: int | None,
     progress: Progress | None,
     notice: Callable[[str], None] | None,
+    pieces: Sequence[int | None] | None = None,
 ) -> GreeksTable:
-    """The sensitivities of every contract."""
+    """The sensitivities of every contract; `pieces` as for prices."""
     from mcx.estimators.greeks import sensitivities
     from mcx.report.greek_results import GreeksTable
     from mcx.report.greek_summary import greeks_result
 
     results = []
-    for ready, wish, precision, seed in zip(_ready(made, dated), wishes, asked, seeds, strict=True):
+    pieces = pieces or [None] * len(dated)
+    for ready, wish, precision, seed, number in zip(_ready(made, dated), wishes, asked, seeds, pieces, strict=True):
         with _finite(ready):
-            found = sensitivities(ready, made.market, wish, precision, seed=seed, threads=threads, progress=progress,
-                                  notice=notice)
-        results.append(greeks_result(ready, made.market, wish, found))
+            found = sensitivities(ready, made.market, wish, precision, seed=seed, threads=threads, pieces=number,
+                                  progress=progress, notice=notice)
+        results.append(greeks_result(found.ready, made.market, wish, found))
     return GreeksTable(tuple(results))
 
 

@@ -187,7 +187,7 @@ class MarketMap:
                 return 0.5 * (self.escrowed(asset, starts, lasts) + closing)
             case LeafKind.DISCOUNT:
                 return self.funded_discount(ends)
-            case LeafKind.TERM:
+            case LeafKind.TERM | LeafKind.LENGTH:
                 return np.array([figure(self.contract, leaf) for leaf in group.leaves])
         raise ValueError(f"no leaf of the market: {group.kind}")
 

@@ -31,8 +31,8 @@ MODEL = frozenset({Op.STEP, Op.BRIDGE_LOW, Op.BRIDGE_HIGH, Op.BRIDGE_RANGE})
 
 
 def of_the_market(leaf: Leaf) -> bool:
-    """Whether a leaf depends on the market: all but the terms of the contract do."""
-    return leaf.kind is not LeafKind.TERM
+    """Whether a leaf depends on the market: all but the terms and days of the contract do."""
+    return leaf.kind not in (LeafKind.TERM, LeafKind.LENGTH)
 
 
 def with_adjoint(tape: Tape, values: Iterable[int], wanted: Wanted = of_the_market) -> Tape:

@@ -155,7 +155,7 @@ def test_continuous_watching():
     knocked = event("end", pay("spot if hit else higher"))
     assert price_jumps(knocked, watches=[watch], watched=span) == ()
     assert kinds(price_jumps(knocked, watches=[watch], watched=span, everything_drawn=True)) == ["condition"]
-    digital = event("end", pay("spot if hit and spot > higher else higher"))
+    digital = event("end", pay("strike if hit and spot > higher else higher"))
     assert kinds(price_jumps(digital, watches=[watch], watched=span)) == ["condition"]
     lookback = running("low", "lowest", "spot")
     assert price_jumps(event("end", pay("spot - low")), watches=[lookback], watched=span) == ()
