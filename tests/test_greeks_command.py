@@ -228,7 +228,7 @@ def test_between_bounds_everything_is_about_the_middle(tmp_path: Path):
     """Of a worst-of watched continuously: the bounds are those of the price of the same paths but for the pilot's error,
     the terminal says so, and the record repeats the steps."""
     record = tmp_path / "greeks.json"
-    asked = (EXAMPLES / "worst_of_watched.yaml", "--paths", 1 << 13, "--seed", 3)
+    asked = (EXAMPLES / "worst_of_watched.yaml", "--paths", 1 << 17, "--seed", 3)
     found = mcx("greeks", *asked, "--json").json["contracts"][1]
     priced = mcx("price", *asked, "--json").json["prices"][1]
     assert found["price"] == pytest.approx(priced["price"], rel=1e-12)
