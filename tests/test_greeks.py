@@ -60,10 +60,12 @@ KNOWN = {
         "touch", "kind: no touch; direction: up; barrier: 125; cash: 10; watched: {continuous: [0y, 1y]}",
         lambda **at: forms.touch_at_expiry("up", "out", "cash", 125.0, 10.0, **at)),
     "double no touch": Known(
-        "double_touch", "kind: no touch; lower_barrier: 75; upper_barrier: 140; cash: 10; watched: {continuous: [0y, 1y]}",
+        "double_touch", "kind: no touch; lower_barrier: 75; upper_barrier: 140; cash: 10; "
+                        "watched: {continuous: [0y, 1y]}",
         lambda **at: double_no_touch(75.0, 140.0, **at)),
     "double no touch in a long step": Known(
-        "double_touch", "kind: no touch; lower_barrier: 85; upper_barrier: 111; cash: 1000; watched: {continuous: [0y, 1y]}",
+        "double_touch", "kind: no touch; lower_barrier: 85; upper_barrier: 111; cash: 1000; "
+                        "watched: {continuous: [0y, 1y]}",
         lambda **at: 100.0 * double_no_touch(85.0, 111.0, **at), JUMPING),
     "rebate at the hit": Known(
         "barrier", "side: call; direction: down; knock: out; strike: 100; barrier: 85; rebate_at_hit: 10; "

@@ -76,7 +76,7 @@ CASES = {"pathwise": ("pathwise", CALL, call), "likelihood": ("likelihood", TEXT
 
 @cache
 def runs(case: str) -> tuple[np.ndarray, np.ndarray]:
-    """Delta, vega, rho and, where there is one, gamma: values and errors of all runs, (runs, 3 or 4), fewest paths each."""
+    """Delta, vega, rho and, where there is one, gamma: values and errors of all runs, (runs, 3 or 4), fewest paths."""
     estimator, text, _ = CASES[case]
     made, market = ready(text)
     method = methods(made, market, estimator).valid[0]

@@ -139,8 +139,8 @@ def joint_extremes(tape: Tape) -> str:
     """Why there is no score: an asset's lowest and highest level are drawn together; '' where none are."""
     place = next((step.place for step in tape.instructions if step.op is Op.BRIDGE_RANGE), None)
     if any(step.op is Op.BRIDGE_RANGE for step in tape.instructions):
-        return (f"the lowest and the highest level of one asset are drawn together{f' at {place}' if place else ''}, and "
-                f"the score of their joint law is not taken")
+        return (f"the lowest and the highest level of one asset are drawn together{f' at {place}' if place else ''}, "
+                f"and the score of their joint law is not taken")
     return ""
 
 

@@ -21,7 +21,8 @@ def show_greeks(result: GreeksResult, page: Page) -> None:
         ("valued on", result.valuation or "time 0"),
         ("price", f"{fixed(result.price * factor, places)} {unit}, standard error "
                   f"{fixed(result.standard_error * factor, places)}"),
-        *([("bounds", f"{bounds(result, Scale(result))}; sensitivities are those of the middle")] if result.bracket else []),
+        *([("bounds", f"{bounds(result, Scale(result))}; sensitivities are those of the middle")]
+          if result.bracket else []),
         ("paths", f"{result.paths:,} in {result.seconds:.2f} s; asked for: {result.planned.asked}"),
         ("seed", f"{result.seed}; variance reduction: {result.reduction}; estimator asked for: {result.estimator}"),
     ))

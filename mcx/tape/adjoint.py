@@ -80,8 +80,9 @@ def along(builder: Builder, gradient: Gradient, leaf: int) -> int:
 
     moved = [(part, factor) for value, parts in gradient.items() if (factor := tangent(value)) is not None
              for part in parts]
-    return on_paths(builder, [Product(factor if part.right is None else builder.emit(Op.MUL, part.right, factor), part.left)
-                              for part, factor in moved])
+    return on_paths(builder, [
+        Product(part.left, factor if part.right is None else builder.emit(Op.MUL, part.right, factor))
+        for part, factor in moved])
 
 
 def sweep(

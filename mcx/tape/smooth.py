@@ -36,8 +36,8 @@ CONDITION, DIVISION, MOMENT = "condition", "division", "moment of a hit"
 
 @dataclass(frozen=True, slots=True, order=True)
 class Jump:
-    """Why a value jumps: 'condition', 'division' (by what may be zero; also a power of it) or 'moment of a hit' (drawn by
-    a choice between two roots, and counted in whole days), and its place, if known.
+    """Why a value jumps: 'condition', 'division' (by what may be zero; also a power of it) or 'moment of a hit' (drawn
+    by a choice between two roots, and counted in whole days), and its place, if known.
 
     `value` is the first value of the tape that does so: the same line makes one on each date.
     """
@@ -62,8 +62,8 @@ def payments(tape: Tape, value: int) -> tuple[int, ...]:
 
 
 def split(builder: Builder, payment: int) -> tuple[int, ...]:
-    """What a payment, (a + b) times a chance, is the sum of: (a times the chance) and (b times the chance); itself where it
-    has no such form."""
+    """What a payment, (a + b) times a chance, is the sum of: (a times the chance) and (b times the chance); itself where
+    it has no such form."""
     step = builder.instructions[payment]
     if step.op is Op.MUL:
         for factor, other in (step.operands, step.operands[::-1]):
