@@ -271,6 +271,8 @@ def replay(
         raise RequestError(f"{file}: the record has {len(runs)} requests for the {there} {what} in its inputs")
     asked = [precision(each["paths"], None, None) for each in runs]
     seeds = [_seed(each["seed"]) for each in runs]
+    brackets = [each.get("bracket") for each in stored["results"]]
+    pieces = [bracket and bracket["pieces"] for bracket in brackets]
     if verb == "verify":
         wishes = [(each["solve"], each["target"]) for each in runs]
         results = _verify(made, dated, wishes, asked, seeds, threads, progress, notice)
@@ -279,10 +281,8 @@ def replay(
 
         keys = ("estimator", "bump", "assets", "spot_moves", "vol_moves")
         wishes = [wish_of(*(each[key] for key in keys)) for each in runs]
-        results = _whole(_greeks(made, dated, wishes, asked, seeds, threads, progress, notice)).contracts
+        results = _whole(_greeks(made, dated, wishes, asked, seeds, threads, progress, notice, pieces)).contracts
     else:
-        brackets = [each.get("bracket") for each in stored["results"]]
-        pieces = [bracket and bracket["pieces"] for bracket in brackets]
         results = _whole(_price(made, dated, asked, seeds, threads, progress, notice, pieces)).prices
     return compare(stored, [each.to_dict() for each in results], environment())
 
@@ -404,24 +404,26 @@ def _greeks(
     threads: int | None,
     progress: Progress | None,
     notice: Callable[[str], None] | None,
+    pieces: Sequence[int | None] | None = None,
 ) -> GreeksTable:
-    """The sensitivities of every contract; after an interruption those so far."""
+    """The sensitivities of every contract; after an interruption those so far. `pieces` as for prices."""
     from mcx.estimators.finite import finite
     from mcx.estimators.greeks import sensitivities
     from mcx.report.greek_results import GreeksTable
     from mcx.report.greek_summary import greeks_result
 
     results = []
-    for ready, wish, precision, seed in zip(_ready(made, dated), wishes, asked, seeds, strict=True):
+    pieces = pieces or [None] * len(dated)
+    for ready, wish, precision, seed, number in zip(_ready(made, dated), wishes, asked, seeds, pieces, strict=True):
         try:
             with finite(ready):
-                found = sensitivities(ready, made.market, wish, precision, seed=seed, threads=threads,
+                found = sensitivities(ready, made.market, wish, precision, seed=seed, threads=threads, pieces=number,
                                       progress=progress, notice=notice)
         except KeyboardInterrupt:
             if not results:
                 raise
             break
-        results.append(greeks_result(ready, made.market, wish, found))
+        results.append(greeks_result(found.ready, made.market, wish, found))
         if found.interrupted:
             break
     return GreeksTable(tuple(results), tuple(each.contract.title for each in dated[len(results):]))

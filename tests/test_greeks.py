@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass
 from functools import cache
+from math import exp
 
 import closed_forms as forms
 import pytest
@@ -39,6 +40,10 @@ class Known:
                 f"terms:\n{terms}  expiry: 1y\n---\n{MARKET}")
 
 
+def double_no_touch(lower: float, upper: float, **at: float) -> float:
+    return 10.0 * exp(-at["rate"] * at["maturity"]) * forms.double_no_touch(lower, upper, **at)
+
+
 JUMPING = ("auto", "likelihood")
 KNOWN = {
     "european put": Known("european", "side: put; strike: 90", lambda **at: forms.european("put", strike=90.0, **at)),
@@ -51,10 +56,28 @@ KNOWN = {
             "call", strike=100.0, times=[t - 1.0 + at["maturity"] for t in MONTHS], **at)),
     "barrier": Known(
         "barrier", "side: put; direction: down; knock: in; strike: 100; barrier: 85; watched: {continuous: [0y, 1y]}",
-        lambda **at: forms.barrier_option("put", "down", "in", 100.0, 85.0, **at), JUMPING, JUMPING),
+        lambda **at: forms.barrier_option("put", "down", "in", 100.0, 85.0, **at)),
     "no touch": Known(
         "touch", "kind: no touch; direction: up; barrier: 125; cash: 10; watched: {continuous: [0y, 1y]}",
-        lambda **at: forms.touch_at_expiry("up", "out", "cash", 125.0, 10.0, **at), JUMPING, JUMPING),
+        lambda **at: forms.touch_at_expiry("up", "out", "cash", 125.0, 10.0, **at)),
+    "double no touch": Known(
+        "double_touch", "kind: no touch; lower_barrier: 75; upper_barrier: 140; cash: 10; "
+                        "watched: {continuous: [0y, 1y]}",
+        lambda **at: double_no_touch(75.0, 140.0, **at)),
+    "double no touch in a long step": Known(
+        "double_touch", "kind: no touch; lower_barrier: 85; upper_barrier: 111; cash: 1000; "
+                        "watched: {continuous: [0y, 1y]}",
+        lambda **at: 100.0 * double_no_touch(85.0, 111.0, **at), JUMPING),
+    "rebate at the hit": Known(
+        "barrier", "side: call; direction: down; knock: out; strike: 100; barrier: 85; rebate_at_hit: 10; "
+                   "watched: {continuous: [0y, 1y]}",
+        lambda **at: forms.barrier_option("call", "down", "out", 100.0, 85.0, **at)
+        + forms.cash_at_hit("down", 85.0, 10.0, **at), ("auto", "likelihood", "mixed"), ()),
+    "rebate at the hit above": Known(
+        "barrier", "side: put; direction: up; knock: out; strike: 100; barrier: 120; rebate_at_hit: 10; "
+                   "watched: {continuous: [0y, 1y]}",
+        lambda **at: forms.barrier_option("put", "up", "out", 100.0, 120.0, **at)
+        + forms.cash_at_hit("up", 120.0, 10.0, **at), ("auto", "likelihood"), ()),
     "lookback call": Known(
         "lookback", "side: call; strike_type: fixed; strike: 105; watched: {continuous: [0y, 1y]}",
         lambda **at: forms.lookback_fixed("call", strike=105.0, **at), gamma=("auto", "pathwise")),
@@ -85,6 +108,20 @@ def test_first_order(name: str, estimator: str):
 def test_gamma(name: str, estimator: str):
     """The change of delta for a move of the spot by 1 %."""
     check(run(name, estimator)["gamma", "harbour", ""], 0.01 * AT["spot"] * bend(KNOWN[name].value, AT, "spot"), 0.05)
+
+
+@pytest.mark.parametrize(("name", "estimator"), [
+    ("barrier", "pathwise"), ("barrier", "likelihood"), ("double no touch", "pathwise"), ("double no touch", "likelihood"),
+    ("rebate at the hit", "likelihood"), ("rebate at the hit", "mixed")])
+def test_several_steps(name: str, estimator: str):
+    """A continuous watch that is cut at the nodes of a flat vol has the same sensitivities."""
+    text = KNOWN[name].text.replace("vol: 22%", "vol: {0.3y: 22%, 0.6y: 22%, 1y: 22%}")
+    found, value = greeks(text, PATHS, SEED, estimator=estimator), KNOWN[name].value
+    check(found["delta", "harbour", ""], slope(value, AT, "spot"), SHARP)
+    check(found["vega", "harbour", "all"], 0.01 * slope(value, AT, "vol"), 0.06)
+    check(found["rho", "EUR", ""], 1e-4 * slope(value, AT, "rate"), SHARP)
+    if KNOWN[name].gamma:
+        check(found["gamma", "harbour", ""], 0.01 * AT["spot"] * bend(value, AT, "spot"), 0.05)
 
 
 @pytest.mark.parametrize("name", KNOWN)

@@ -300,3 +300,20 @@ def test_python_takes_texts_and_numbers(call: Path):
     assert one.ladder == other.ladder
     with pytest.raises(RequestError, match="named twice"):
         package.greeks(call, paths=PATHS, spot_moves=[0.01, "1%"])
+
+
+def test_between_bounds_everything_is_about_the_middle(tmp_path: Path):
+    """Of a worst-of watched continuously: the bounds are those of the price of the same paths but for the pilot's error,
+    the terminal says so, and the record repeats the steps."""
+    record = tmp_path / "greeks.json"
+    asked = (EXAMPLES / "worst_of_watched.yaml", "--paths", 1 << 17, "--seed", 3)
+    found = mcx("greeks", *asked, "--json").json["contracts"][1]
+    priced = mcx("price", *asked, "--json").json["prices"][1]
+    assert found["price"] == pytest.approx(priced["price"], rel=1e-12)
+    bracket, bounds = found["bracket"], priced["bracket"]
+    assert bracket["pieces"] == bounds["pieces"] > 1
+    assert bracket["width"] == pytest.approx(bounds["width"], abs=6 * bounds["width_standard_error"] + 1e-5)
+    shown = mcx("greeks", *asked, "--record", record)
+    assert "sensitivities are those of the middle" in " ".join(shown.out.split())
+    again = mcx("replay", record, "--json")
+    assert again.code == 0 and again.json["identical"]

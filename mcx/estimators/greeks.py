@@ -16,6 +16,7 @@ import numpy as np
 
 from mcx.checked.market import Market
 from mcx.estimators.batches import FEWEST_PATHS, Batches, Sampling
+from mcx.estimators.bracket import Refinement
 from mcx.estimators.derivative_tape import pairs_of
 from mcx.estimators.differentiate import Coefficients, Differentiator
 from mcx.estimators.estimate import Estimate
@@ -23,7 +24,7 @@ from mcx.estimators.ladder import Point, Step, grid, ladder, spot_shifts, today,
 from mcx.estimators.methods import PATHWISE, Method, methods
 from mcx.estimators.pace import announce, pace
 from mcx.estimators.plan import Plan, Precision, plan
-from mcx.estimators.price import Ready
+from mcx.estimators.price import Ready, refined
 from mcx.estimators.revalue import (
     IN_PROPORTION,
     RATES,
@@ -69,7 +70,9 @@ class Value:
 
 @dataclass(frozen=True, slots=True)
 class Found:
-    """Everything that a run found; `refused` are sensitivities with the reason why there is no value."""
+    """Everything that a run found; `refused` are sensitivities with the reason why there is no value. `ready` is the contract
+    as it was run; `refinement` how fine its steps are, where the price lies between bounds and everything is about their
+    middle."""
 
     price: Estimate
     values: tuple[Value, ...]
@@ -83,6 +86,8 @@ class Found:
     plan: Plan
     seed: int
     seconds: float
+    ready: Ready
+    refinement: Refinement | None
     interrupted: bool = False
 
 
@@ -94,22 +99,24 @@ def sensitivities(
     *,
     seed: int,
     threads: int | None = None,
+    pieces: int | None = None,
     progress: Callable[[int, int, float], None] | None = None,
     notice: Notice | None = None,
 ) -> Found:
-    """All sensitivities of a contract that were asked for.
+    """All sensitivities of a contract that were asked for; `pieces` prescribe how fine the steps are where the price lies
+    between bounds.
 
     Raises Refusal where the estimator asked for is not valid, and NonFinitePath, NonFiniteSum, KeyboardInterrupt as
     `Sampling.sums` does.
     """
-    return _Run(ready, market, wish, asked, seed, threads, progress, notice).found()
+    return _Run(ready, market, wish, asked, seed, threads, pieces, progress, notice).found()
 
 
 class _Run:
     """One contract's sensitivities under way."""
 
     def __init__(self, ready: Ready, market: Market, wish: Wish, asked: Precision, seed: int, threads: int | None,
-                 progress: Callable[[int, int, float], None] | None, notice: Notice | None):
+                 pieces: int | None, progress: Callable[[int, int, float], None] | None, notice: Notice | None):
         self.ready, self.market, self.wish = ready, market, wish
         self.contract = ready.dated.contract
         self.numbers = inputs(market, self.contract)
@@ -118,10 +125,13 @@ class _Run:
         self.pilot = Sampling(seed, PILOT_PATHS, Stream.PILOT, threads, notice=notice)
         self.methods = methods(ready, market, wish.estimator, self.pilot)
         self.bound: dict[str, Differentiator] = {}
-        self.plan = self._plan(asked)
+        self.plan, self.refinement = self._plan(asked), None
+        if ready.unrolled.bracketed:
+            self._refine(asked, pieces)
+        announce(self.plan.paths, self._pace(), notice)
         counted = progress and (lambda done, _, error: progress(done, self.plan.paths, error))
         self.sampling = Sampling(seed, self.plan.paths, Stream.MAIN, threads, counted, notice)
-        self.revaluer = Revaluer.of(ready.unrolled.tape, self.contract)
+        self.revaluer = Revaluer.of(self.ready.unrolled.tape, self.contract)
         self.piloted: dict[str, tuple[Coefficients, Batches, Batches]] = {}
         self.done: dict[str, tuple[Batches, Batches]] = {}
         self.base: tuple[Batches, Estimate] | None = None  # the price of the main run
@@ -150,31 +160,38 @@ class _Run:
         self.notes += [*between(self.ready.dated), *self._near(values), *self._turning()]
         return Found(price, tuple(values), tuple(self.refused), tuple(comparison), tuple(self.choices),
                      self.methods.jumps, tuple(rungs), tuple(points), tuple(self.notes), self.plan, self.sampling.seed,
-                     time.perf_counter() - begun, self.interrupted)
+                     time.perf_counter() - begun, self.ready, self.refinement, self.interrupted)
 
     def _wanted(self, subject: str) -> bool:
         """Whether an asset's or a pair's line was asked for; a currency's always is."""
         named = [name for name in subject.split("/") if name in self.contract.assets]
         return not self.wish.assets or all(name in self.wish.assets for name in named)
 
-    def _plan(self, asked: Precision) -> Plan:
+    def _prices(self, paths: int) -> np.ndarray:
+        """The price on each path of the pilot."""
         program = replace(self.ready.program, outputs=self.ready.program.outputs[:1])
+        return values_by_path(program, paths=paths, seed=self.pilot.seed, stream=Stream.PILOT,
+                              threads=self.pilot.threads)[0]
 
-        def prices(paths: int) -> np.ndarray:
-            return values_by_path(program, paths=paths, seed=self.pilot.seed, stream=Stream.PILOT,
-                                  threads=self.pilot.threads)[0]
+    def _refine(self, asked: Precision, pieces: int | None) -> None:
+        """Go on with steps so fine that the bounds of the price are close."""
+        self.ready, planned, self.refinement = refined(self.ready, asked, self.plan, self._prices, seed=self.pilot.seed,
+                                                       threads=self.pilot.threads, pieces=pieces)
+        self.plan = replace(planned, paths=max(planned.paths, FEWEST_PATHS))
+        self.methods, self.bound = methods(self.ready, self.market, self.wish.estimator, self.pilot), {}
 
+    def _plan(self, asked: Precision) -> Plan:
         def seconds_for(paths: int) -> float:
             begun = time.perf_counter()
             for method in self.methods.valid:
                 self._bound(method).derivatives(replace(self.pilot, paths=max(paths, FEWEST_PATHS)))
             return time.perf_counter() - begun
 
-        speed = pace((self._bound(method).program for method in self.methods.valid), self.pilot.threads)
-        found = plan(asked, prices, seconds_for, exact=program.outputs[0] < 0, pace=speed)
-        found = replace(found, paths=max(found.paths, FEWEST_PATHS))
-        announce(found.paths, speed, self.pilot.notice)
-        return found
+        found = plan(asked, self._prices, seconds_for, exact=self.ready.program.outputs[0] < 0, pace=self._pace())
+        return replace(found, paths=max(found.paths, FEWEST_PATHS))
+
+    def _pace(self) -> float:
+        return pace((self._bound(method).program for method in self.methods.valid), self.pilot.threads)
 
     def _bound(self, method: Method) -> Differentiator:
         """A method's tape on the market as it stands."""

@@ -18,11 +18,12 @@ from mcx.estimators.proxy import with_proxy
 from mcx.faults import Refusal
 from mcx.leaves.market_map import MarketMap
 from mcx.machine.run import values_by_path
+from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Instruction, Leaf, LeafKind, Tape
 from mcx.tape.registers import lower, uniform_values
-from mcx.tape.smooth import Jump, jumps, payments
+from mcx.tape.smooth import Jump, jumps, payments, split
 
 PATHWISE, LIKELIHOOD, MIXED = "pathwise", "likelihood ratio", "mixed"
 GAMMAS = {PATHWISE: "likelihood ratio of the pathwise delta", LIKELIHOOD: "second-order likelihood ratio",
@@ -74,9 +75,8 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
     price = unrolled.tape.outputs[0]
     tape = without_first_levels(drop_dead_code(replace(unrolled.tape, outputs=(price,), sums=())))
     values = MarketMap(market, contract).values(tape.leaves)
+    tape, paid, found = _shared_out(tape, values)
     known = uniform_values(tape, values)
-    paid = payments(tape, tape.outputs[0].value)
-    found = dict(zip(paid, jumps(tape, values, paid), strict=True))
     jumping = [payment for payment in paid if found[payment]]
     smooth = [payment for payment in paid if not found[payment]]
     places = tuple({(jump.kind, jump.place): jump for payment in jumping for jump in found[payment]}.values())
@@ -124,6 +124,23 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
     return Methods(tuple(valid), places, reason)
 
 
+def _shared_out(tape: Tape, values: np.ndarray) -> tuple[Tape, tuple[int, ...], dict[int, tuple[Jump, ...]]]:
+    """The payments of a price and what makes each jump. Payments that are weighed by one chance stand as one; they are
+    split where that leaves something smooth."""
+    paid = payments(tape, tape.outputs[0].value)
+    found = dict(zip(paid, jumps(tape, values, paid), strict=True))
+    builder = Builder.of(tape)
+    parts = {payment: split(builder, payment) for payment in found if found[payment]}
+    every = [part for payment in parts for part in parts[payment] if len(parts[payment]) > 1]
+    longer = Tape(tuple(builder.instructions), tape.outputs, tape.normals, tape.uniforms)
+    of_parts = dict(zip(every, jumps(longer, values, every), strict=True))
+    worth = {payment for payment in parts if any(not of_parts.get(part, True) for part in parts[payment])}
+    if not worth:
+        return tape, paid, found
+    shared = [part for payment in paid for part in (parts[payment] if payment in worth else (payment,))]
+    return longer, tuple(shared), found | of_parts
+
+
 def without_own_randomness(values: dict[Leaf, float], names: Sequence[str]) -> str:
     """Why the paths have no density: an asset or a rate of exchange (by `names`) that does not move by itself, or as good
     as not; '' where all do."""
@@ -143,8 +160,8 @@ def joint_extremes(tape: Tape) -> str:
     """Why there is no score: an asset's lowest and highest level are drawn together; '' where none are."""
     place = next((step.place for step in tape.instructions if step.op is Op.BRIDGE_RANGE), None)
     if any(step.op is Op.BRIDGE_RANGE for step in tape.instructions):
-        return (f"the lowest and the highest level of one asset are drawn together{f' at {place}' if place else ''}, and "
-                f"the score of their joint law is not taken")
+        return (f"the lowest and the highest level of one asset are drawn together{f' at {place}' if place else ''}, "
+                f"and the score of their joint law is not taken")
     return ""
 
 

@@ -29,12 +29,14 @@ Progress = Callable[[int, int, float], None]  # paths done, paths planned, stand
 
 @dataclass(frozen=True, slots=True)
 class Ready:
-    """A dated contract on a market, as a program that can be run."""
+    """A dated contract on a market, as a program that can be run; `pieces`: how far its steps are refined
+    (`estimators.bracket`)."""
 
     dated: DatedContract
     market: MarketMap
     unrolled: Unrolled
     program: Program
+    pieces: int = 1
 
 
 @dataclass(frozen=True, slots=True)
@@ -69,7 +71,7 @@ class Valuation:
 def prepare(dated: DatedContract, market: Market) -> tuple[Ready | None, tuple[Fault, ...]]:
     """The program of a contract on a market, and what the tape refuses.
 
-    Where several assets are watched together (`unrolled.bracketed`) its steps are not refined yet; `value` does that.
+    Where several assets are watched together (`unrolled.bracketed`) its steps are not refined yet; `refined` does that.
     """
     market_map = MarketMap.of(market, dated)
     if faults := market_map.faults():
@@ -120,13 +122,8 @@ def value(
     planned = plan(asked, prices, seconds_for, exact=price.outputs[0] < 0, pace=pace([ready.program], threads))
     refinement = None
     if ready.unrolled.bracketed:
-        target = planned.target or NORMAL_95 * float(prices(PILOT).std(ddof=1)) / math.sqrt(planned.paths)
-        unrolled, program, refinement = refine(lambda number: _made(ready.dated, ready.market, number), target,
-                                               seed=seed, threads=threads, pieces=pieces)
-        ready = replace(ready, unrolled=unrolled, program=program)
-        outputs = unrolled.tape.outputs
-        if asked.seconds is not None:  # finer steps leave time for fewer paths
-            planned = replace(planned, paths=whole_groups(max(planned.paths / refinement.cost, GROUP)))
+        ready, planned, refinement = refined(ready, asked, planned, prices, seed=seed, threads=threads, pieces=pieces)
+        outputs = ready.unrolled.tape.outputs
     announce(planned.paths, pace([ready.program], threads), notice)
     begun = time.perf_counter()
     sums = run(ready.program, paths=planned.paths, snapshots=[planned.paths // share for share in SHARES],
@@ -136,6 +133,20 @@ def value(
         raise KeyboardInterrupt
     results = estimates(sums.paths, sums.mean, sums.m2)
     return Valuation(outputs, results, _stages(sums), planned, seed, seconds, sums.interrupted, ready, refinement)
+
+
+def refined(
+    ready: Ready, asked: Precision, planned: Plan, prices: Callable[[int], np.ndarray], *, seed: int,
+    threads: int | None = None, pieces: int | None = None,
+) -> tuple[Ready, Plan, Refinement]:
+    """The contract with steps so fine that the bounds of its price are close enough, and how many paths there is time for
+    then. `prices(paths)` gives the price on each path of the pilot."""
+    target = planned.target or NORMAL_95 * float(prices(PILOT).std(ddof=1)) / math.sqrt(planned.paths)
+    unrolled, program, refinement = refine(lambda number: _made(ready.dated, ready.market, number), target,
+                                           seed=seed, threads=threads, pieces=pieces)
+    if asked.seconds is not None:  # finer steps leave time for fewer paths
+        planned = replace(planned, paths=whole_groups(max(planned.paths / refinement.cost, GROUP)))
+    return replace(ready, unrolled=unrolled, program=program, pieces=refinement.pieces), planned, refinement
 
 
 def _counted(progress: Progress | None, planned: Plan) -> Callable[[int, float, float], None] | None:

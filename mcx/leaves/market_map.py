@@ -109,7 +109,8 @@ class MarketMap:
         """How the tape makes levels of what is simulated."""
         return Makeup(
             cash={number: WEEKLY if self.quotes[number].decrement else MONTHLY
-                  for number, paid in enumerate(self._payouts) if paid.cash_times},
+                  for number, paid in enumerate(self._payouts)
+                  if any(self.last is None or time < self.last + SOON for time in paid.cash_times)},
             ex=frozenset((number, when) for number, paid in enumerate(self._payouts) for when in paid.share_times),
             rates={number: meets.number for number, meets in enumerate(self._exchanges)
                    if meets and meets.number is not None})
@@ -187,7 +188,7 @@ class MarketMap:
                 return 0.5 * (self.escrowed(asset, starts, lasts) + closing)
             case LeafKind.DISCOUNT:
                 return self.funded_discount(ends)
-            case LeafKind.TERM:
+            case LeafKind.TERM | LeafKind.LENGTH:
                 return np.array([figure(self.contract, leaf) for leaf in group.leaves])
         raise ValueError(f"no leaf of the market: {group.kind}")
 

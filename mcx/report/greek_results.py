@@ -10,7 +10,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-from mcx.report.results import Planned, Result
+from mcx.report.results import Bracket, Planned, Result
 
 
 @dataclass(frozen=True, slots=True)
@@ -93,9 +93,10 @@ class GridPoint(Result):
 class GreeksResult(Result):
     """How a contract's value moves: `mcx greeks`.
 
-    `greeks` are the estimates, `comparison` the same ones by revaluation with common random numbers where that was
-    asked for. `estimator` is what was asked for; each Greek names its own, and `choices` says why. `jumps` are the
-    conditions that forbid pathwise estimates. `bump`, `assets`, `spot_moves` and `vol_moves` repeat the request.
+    `greeks` are the estimates, `comparison` the same ones by revaluation with common random numbers where that was asked
+    for. `estimator` is what was asked for; each Greek names its own, and `choices` says why. `jumps` are the conditions
+    that forbid pathwise estimates. `bracket` is None but where the price is the middle of two bounds: then every number is
+    that of the middle. `bump`, `assets`, `spot_moves` and `vol_moves` repeat the request.
     """
 
     contract: str
@@ -107,6 +108,7 @@ class GreeksResult(Result):
     unit: str
     price: float
     standard_error: float
+    bracket: Bracket | None
     paths: int
     seconds: float
     seed: int

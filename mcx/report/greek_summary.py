@@ -13,7 +13,7 @@ from mcx.estimators.sensitivities import Curvature, Sensitivity
 from mcx.report.cautions import assumptions, cautions, limits
 from mcx.report.greek_results import AssetDelta, Greek, GreeksResult, GridPoint, Jump, Refused, Rung
 from mcx.report.results import Planned
-from mcx.report.summary import NO_REDUCTION
+from mcx.report.summary import NO_REDUCTION, bracket
 
 CLEAR = 2.0  # a value below this many errors is not resolved
 NAN = float("nan")
@@ -35,6 +35,7 @@ def greeks_result(ready: Ready, market: Market, wish: Wish, found: Found) -> Gre
         unit="notional" if contract.notional is not None else "currency per unit",
         price=found.price.value,
         standard_error=found.price.standard_error,
+        bracket=found.refinement and bracket(found.price, found.refinement.width, found.refinement, ()),
         paths=found.price.paths,
         seconds=found.seconds,
         seed=found.seed,

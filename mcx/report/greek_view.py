@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Sequence
 
 from mcx.report.greek_results import Greek, GreeksResult, Rung
+from mcx.report.price_view import Scale, bounds
 from mcx.report.terminal import Page, decimals, fixed
 
 JUMP = "jump"
@@ -22,6 +23,8 @@ def show_greeks(result: GreeksResult, page: Page) -> None:
         ("valued on", result.valuation or "time 0"),
         ("price", f"{fixed(result.price * factor, places)} {unit}, standard error "
                   f"{fixed(result.standard_error * factor, places)}"),
+        *([("bounds", f"{bounds(result, Scale(result))}; sensitivities are those of the middle")]
+          if result.bracket else []),
         ("paths", f"{result.paths:,} in {result.seconds:.2f} s; asked for: {result.planned.asked}"),
         ("seed", f"{result.seed}; variance reduction: {result.reduction}; estimator asked for: {result.estimator}"),
     ))

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 
+from mcx.report.greek_results import GreeksResult
 from mcx.report.results import Amount, Condition, PriceResult, PriceTable
 from mcx.report.terminal import Page, decimals, fixed
 
@@ -14,7 +15,7 @@ PROBABILITIES = "probabilities (risk-neutral, not a forecast)"
 class Scale:
     """How prices are shown: percent of the notional, or money per unit."""
 
-    def __init__(self, result: PriceResult):
+    def __init__(self, result: PriceResult | GreeksResult):
         self.percent = result.notional is not None
         self.factor = 100.0 if self.percent else 1.0
         self.sign = " %" if self.percent else ""
@@ -83,14 +84,14 @@ def _facts(result: PriceResult, scale: Scale) -> Iterator[tuple[str, str]]:
     yield "standard error", f"{scale.show(result.standard_error, places)}{scale.sign}"
     yield "95 % interval", f"{low} to {high}{scale.sign}"
     if result.bracket:
-        yield "bounds", _bounds(result, scale)
+        yield "bounds", bounds(result, scale)
     yield "paths", f"{result.paths:,} in {result.seconds:.2f} s; asked for: {result.planned.asked}"
     yield "seed", f"{result.seed}; variance reduction: {result.reduction}"
     life = decimals(result.expected_life_standard_error, 2, 2)
     yield "expected life", f"{fixed(result.expected_life, min(life, 4))} years (risk-neutral)"
 
 
-def _bounds(result: PriceResult, scale: Scale) -> str:
+def bounds(result: PriceResult | GreeksResult, scale: Scale) -> str:
     """What is said of a price between bounds."""
     bracket = result.bracket
     places = scale.places(max(bracket.width, result.standard_error))

@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Iterable
 
 from mcx.checked.market import Market
+from mcx.estimators.bracket import Refinement
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.price import Ready, Valuation
 from mcx.report.cautions import assumptions, cautions, limits, warnings
@@ -81,12 +83,16 @@ def _bracket(valuation: Valuation) -> Bracket | None:
     if taken is None:
         return None
     widths = {output.subject: estimate for output, estimate in valuation.of("gap")}
-    price, width = valuation.price, widths.pop("price", Estimate(0.0, 0.0, valuation.price.paths))
+    width = widths.pop("price", Estimate(0.0, 0.0, valuation.price.paths))
+    return bracket(valuation.price, width, taken, (Width(name, each.value) for name, each in widths.items()))
+
+
+def bracket(price: Estimate, width: Estimate, taken: Refinement, others: Iterable[Width]) -> Bracket:
+    """The bounds about the middle, and how they were brought so close."""
     return Bracket(
         lower=price.value - 0.5 * width.value, upper=price.value + 0.5 * width.value, width=width.value,
         width_standard_error=width.standard_error, target=taken.target, reached=taken.reached, pieces=taken.pieces,
-        steps=taken.steps, unrefined=taken.unrefined, cost=taken.cost,
-        others=tuple(Width(name, estimate.value) for name, estimate in widths.items()),
+        steps=taken.steps, unrefined=taken.unrefined, cost=taken.cost, others=tuple(others),
     )
 
 

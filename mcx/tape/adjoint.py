@@ -31,8 +31,8 @@ MODEL = frozenset({Op.STEP, Op.BRIDGE_LOW, Op.BRIDGE_HIGH, Op.BRIDGE_RANGE})
 
 
 def of_the_market(leaf: Leaf) -> bool:
-    """Whether a leaf depends on the market: all but the terms of the contract do."""
-    return leaf.kind is not LeafKind.TERM
+    """Whether a leaf depends on the market: all but the terms and days of the contract do."""
+    return leaf.kind not in (LeafKind.TERM, LeafKind.LENGTH)
 
 
 def with_adjoint(tape: Tape, values: Iterable[int], wanted: Wanted = of_the_market) -> Tape:
@@ -80,8 +80,9 @@ def along(builder: Builder, gradient: Gradient, leaf: int) -> int:
 
     moved = [(part, factor) for value, parts in gradient.items() if (factor := tangent(value)) is not None
              for part in parts]
-    return on_paths(builder, [Product(factor if part.right is None else builder.emit(Op.MUL, part.right, factor), part.left)
-                              for part, factor in moved])
+    return on_paths(builder, [
+        Product(part.left, factor if part.right is None else builder.emit(Op.MUL, part.right, factor))
+        for part, factor in moved])
 
 
 def sweep(

@@ -202,7 +202,7 @@ def _twice_negative(at: At, variance: Any) -> Any:
 
 def _bend_by_start(at: At) -> Any:
     """The second derivative of the corridor's chance by d0: the density of paths that stay inside solves the heat
-    equation, so that it follows from the first ones, f00 = 2 fv - 2 f0 (d1 - d0) / v. Here `at` is CORRIDOR_BY_START."""
+    equation, so that it follows from the first ones, f00 = 2 fv - 2 f0 (d1 - d0) / v; `at` is CORRIDOR_BY_START."""
     d0, d1, _, variance = at.operands
     drift = at.emit(Op.DIV, at.emit(Op.MUL, at.value, at.emit(Op.SUB, d1, d0)), _twice_negative(at, variance))
     half = at.emit(Op.STEP, _corridor_variance(at), at.constant(2.0), drift)
@@ -296,8 +296,8 @@ ADJOINTS: dict[Op, tuple[Rule | None, ...]] = {
 
 
 def rules_of(op: Op, operands: int) -> tuple[Rule | None, ...]:
-    """The rule of each operand; those of a LOOKUP are one for each entry of its table, and none for what counts them: it
-    jumps there."""
+    """The rule of each operand; those of a LOOKUP are one for each entry of its table, and none for what counts them:
+    it jumps there."""
     if op is Op.LOOKUP:
         return (None, *(_entry(number, operands - 2) for number in range(operands - 1)))
     return ADJOINTS.get(op, (None,) * operands)

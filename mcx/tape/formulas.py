@@ -292,6 +292,8 @@ def fixed_values(tape: Tape, contract: Contract) -> list[float | None]:
 
 
 def figure(contract: Contract, leaf: Leaf) -> float:
-    """The number behind a TERM leaf."""
+    """The number behind a TERM or a LENGTH, which no market changes."""
+    if leaf.kind is LeafKind.LENGTH:
+        return leaf.end - leaf.start
     rows = contract.terms[leaf.name].rows
     return rows[max(leaf.index, 0)][max(leaf.asset, 0)]

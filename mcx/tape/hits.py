@@ -170,8 +170,13 @@ class Hits:
         return self.builder.emit(Op.SUB, self.time(stretch, part), start)
 
     def _moment(self, stretch: Stretch, part: int) -> int:
-        length = self.builder.constant(stretch.end - stretch.start)
-        return self.builder.emit(Op.ADD, self.builder.emit(Op.MUL, part, length), self.builder.constant(stretch.start))
+        return self.builder.emit(Op.SUB, self.builder.constant(stretch.end), self._left(stretch, part))
+
+    def _left(self, stretch: Stretch, part: int) -> int:
+        """The time from a moment to the end of its stretch: counted from there, a day later only the length is less."""
+        emit, one = self.builder.emit, self.builder.constant(1.0)
+        length = self.builder.leaf(Leaf(LeafKind.LENGTH, start=stretch.start, end=stretch.end))
+        return emit(Op.MUL, emit(Op.SUB, one, part), length)
 
     def _between(self, stretch: Stretch, part: int) -> int:
         """The discount factor at a moment: log-linear, since no node lies inside. At the very end it is that date's
@@ -196,10 +201,9 @@ class Hits:
         if len(set(entries)) == 1:
             return entries[0]
         emit, constant = self.builder.emit, self.builder.constant
-        passed = stretch.start * YEAR - stretch.hit.days[0].time * YEAR - (self._numbers(stretch)[0] - 1)
-        days = emit(Op.MUL, part, constant((stretch.end - stretch.start) * YEAR))
-        if abs(passed) > ROUNDING:
-            days = emit(Op.ADD, days, constant(passed))
+        last = (stretch.end - stretch.hit.days[0].time) * YEAR - (self._numbers(stretch)[0] - 1)
+        left = emit(Op.MUL, self._left(stretch, part), constant(YEAR))
+        days = emit(Op.SUB, constant(float(round(last)) if abs(last - round(last)) < ROUNDING else last), left)
         return emit(Op.LOOKUP, days, *entries, place=stretch.hit.event.place)
 
     def _barrier(self, stretch: Stretch, flag: int) -> tuple[int, int]:

@@ -28,6 +28,7 @@ class LeafKind(Enum):
     ESCROW = "cash dividends still to come"  # asset, end, last
     MEAN_ESCROW = "mean of the cash dividends to come over a step"  # asset, start, end, last
     DISCOUNT = "funded discount factor"  # end: when the amount is paid
+    LENGTH = "length of a step in years"  # start, end
     TERM = "a numeric term of the contract"  # name, asset (-1: one for all), index (-1: one for all dates)
 
 

@@ -22,6 +22,7 @@ from heapq import heappop, heappush
 import numpy as np
 
 from mcx.faults import Place
+from mcx.tape.builder import Builder
 from mcx.tape.ops import OPS, Op
 from mcx.tape.polynomials import HIGHEST_DEGREE, Polynomial, Polynomials, scaled, total
 from mcx.tape.program import LeafKind, Tape
@@ -60,6 +61,25 @@ def payments(tape: Tape, value: int) -> tuple[int, ...]:
         else:
             parts.append(number)
     return tuple(parts)
+
+
+def split(builder: Builder, payment: int) -> tuple[int, ...]:
+    """What a payment, (a + b) times a chance, is the sum of: (a times the chance) and (b times the chance); itself where
+    it has no such form."""
+    step = builder.instructions[payment]
+    if step.op is Op.MUL:
+        for factor, other in (step.operands, step.operands[::-1]):
+            parts = _addends(builder, factor)
+            if len(parts) > 1:
+                return tuple(builder.emit(Op.MUL, part, other, place=step.place) for part in parts)
+    return (payment,)
+
+
+def _addends(builder: Builder, value: int) -> list[int]:
+    step = builder.instructions[value]
+    if step.op is Op.ADD:
+        return [part for k in step.operands for part in _addends(builder, k)]
+    return [value]
 
 
 def jumps(tape: Tape, leaf_values: Sequence[float] | np.ndarray, values: Iterable[int]) -> tuple[tuple[Jump, ...], ...]:

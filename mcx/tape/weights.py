@@ -153,8 +153,8 @@ class _Walk:
         return shared + [self.builder.emit(Op.MUL, part, half) for part in apart]
 
     def _expected(self, value: Linear, bound: Bound) -> list[int]:
-        """What the value is the sum of, with every event as its probability; where that is known between bounds only, at
-        its lower or upper end: a negative coefficient takes the other bound."""
+        """What the value is the sum of, with every event as its probability; where that is known between bounds only,
+        at its lower or upper end: a negative coefficient takes the other bound."""
         emit, nothing = self.builder.emit, self.builder.constant(0.0)
         other = Bound.UPPER if bound is Bound.LOWER else Bound.LOWER
         parts: list[int] = []

@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
-from math import exp, log, sqrt
+from math import exp, hypot, log, sqrt
 from pathlib import Path
 
 import pytest
+from closed_forms import touch_at_expiry
+from greek_tools import bend, slope
 from scipy.special import ndtr
 
 import mcx
@@ -135,3 +137,40 @@ def test_dividends_decrement_and_rates_of_exchange(tmp_path: Path):
     near(found["fx delta", "EUR per USD"], df * by_forward * 100 * exp(0.03))
     near(found["fx vega", "EUR per USD"], 0.01 * df * by_vol * (0.12 + 0.4 * 0.2) / vol)
     near(found["correlation", "harbour/EUR per USD"], 0.01 * df * by_vol * 0.2 * 0.12 / vol)
+
+
+NO_TOUCH = """payoff: touch
+terms: {kind: no touch, direction: down, barrier: 80, cash: 100, watched: {continuous: [0y, 1y]}, expiry: 1y}
+"""
+SHARES = "currency: EUR, dividends: [{ex: 0.5y, share: 5%}], vol: 20%"
+CASH = "currency: EUR, dividends: [{ex: 0.35y, cash: 5}], vol: 20%"
+
+
+def test_no_touch_of_a_converted_asset(tmp_path: Path):
+    """The converted level is one lognormal: derivatives of the closed form with the vol of both."""
+    rate = "fx: {EUR per USD: {spot: 0.9, vol: 12%}}\ncorrelation: {harbour/EUR per USD: 40%}\n"
+    found, _ = greeks(tmp_path, HEAD + "conversion: {harbour: composite}\n" + NO_TOUCH.replace("80", "72")
+                      + market("currency: USD, yield: 1%, vol: 20%", rate))
+
+    def value(spot: float, vol: float) -> float:
+        both = sqrt(vol**2 + 0.0144 + 2 * 0.4 * vol * 0.12)
+        return touch_at_expiry("down", "out", "cash", 80.0, 100.0, spot=spot, maturity=1.0, rate=0.04,
+                               dividend_yield=0.01, vol=both)
+
+    near(found["delta", "harbour"], slope(lambda spot: value(spot, 0.2), {"spot": 100.0}, "spot"))
+    near(found["vega", "harbour"], 0.01 * slope(lambda vol: value(100.0, vol), {"vol": 0.2}, "vol"))
+    near(found["gamma", "harbour"], bend(lambda spot: value(spot, 0.2), {"spot": 100.0}, "spot"))
+
+
+@pytest.mark.parametrize("asset", [SHARES, CASH])
+def test_no_touch_with_dividends(tmp_path: Path, asset: str):
+    """Against revaluation: the level jumps at the ex date, and cash moves the level that is watched."""
+    file = tmp_path / "case.yaml"
+    file.write_text(HEAD + NO_TOUCH + market(asset))
+    result = mcx.greeks(file, paths=2**18, seed=SEED, bump=0.01)
+    assert {"gamma", "delta"} & {each.name for each in result.refused} == ({"gamma"} if asset == CASH else set())
+    found = {each.name: each for each in result.greeks}
+    for each in result.comparison:
+        if each.name in found and each.name != "gamma":
+            error = hypot(each.standard_error, found[each.name].standard_error)
+            assert abs(found[each.name].value - each.value) < 4 * error + 0.01 * abs(each.value), each.name

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from pathlib import Path
 
 import pytest
@@ -80,3 +81,18 @@ def test_watches_with_cash_dividends_are_nearly_exact(tmp_path: Path):
     file.write_text(plain)
     assert plain != text
     assert [watch.law for watch in mcx.readback(file).readbacks[0].watches] == ["exact"]
+
+
+@pytest.mark.parametrize("paid", ["cash: 6.0", "share: 3%"])
+def test_a_hit_that_a_dividend_may_bring_about_is_refused(tmp_path: Path, paid: str):
+    """At the line of the event; a dividend after the watch does no harm."""
+    example = (Path(__file__).parents[2] / "payoffs" / "examples" / "touch_at_hit.yaml").read_text()
+    file = tmp_path / "case.yaml"
+    for ex, refused in (("2027-02-01", True), ("2031-02-01", False)):
+        file.write_text(re.sub(r"yield: \S+?,", f"dividends: [{{ex: {ex}, {paid}}}],", example, count=1))
+        assert file.read_text() != example
+        if refused:
+            with pytest.raises(mcx.InputError, match="the moment of a hit is not known where"):
+                mcx.price(file, paths=4096)
+        else:
+            mcx.price(file, paths=4096)

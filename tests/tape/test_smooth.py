@@ -181,7 +181,7 @@ def test_continuous_watching():
     knocked = event("end", pay("spot if hit else higher"))
     assert price_jumps(knocked, watches=[watch], watched=span) == ()
     assert kinds(price_jumps(knocked, watches=[watch], watched=span, everything_drawn=True)) == ["condition"]
-    digital = event("end", pay("spot if hit and spot > higher else higher"))
+    digital = event("end", pay("strike if hit and spot > higher else higher"))
     assert kinds(price_jumps(digital, watches=[watch], watched=span)) == ["condition"]
     lookback = running("low", "lowest", "spot")
     assert price_jumps(event("end", pay("spot - low")), watches=[lookback], watched=span) == ()
@@ -210,13 +210,13 @@ LIBRARY = {
 
 @pytest.mark.parametrize("name", LIBRARY)
 def test_the_library(name: str):
-    """Digitals and autocalls jump, at a line of their definition, and amounts paid at a hit; Asians and the like do not,
-    nor do continuous barriers, which enter by their chance."""
+    """Digitals and autocalls jump, at a line of their definition, and amounts paid at a hit; Asians and the like do
+    not, nor do continuous barriers, which enter by their chance."""
     assert {place for places in jumps_of_example(name) for place in places} == LIBRARY[name]
 
 
-@pytest.mark.parametrize(("name", "number"), [("barrier", 0), ("barrier", 2), ("double_barrier", 0), ("touch", 0), ("bonus", 0),
-                                              ("barrier_reverse_convertible", 2), ("worst_of_watched", 1)])
+@pytest.mark.parametrize(("name", "number"), [("barrier", 0), ("barrier", 2), ("double_barrier", 0), ("touch", 0),
+                                              ("bonus", 0), ("barrier_reverse_convertible", 2), ("worst_of_watched", 1)])
 def test_continuous_barriers_of_the_library(name: str, number: int):
     """Watched on dates the same definitions jump."""
     assert jumps_of_example(name)[number] == set()
