@@ -23,13 +23,12 @@ from mcx.text.located import Document
 if TYPE_CHECKING:
     from mcx.estimators.greeks import Wish
     from mcx.estimators.plan import Precision
-    from mcx.estimators.price import Ready
+    from mcx.estimators.ready import Ready
     from mcx.report.greek_results import GreeksResult, GreeksTable
     from mcx.report.results import Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay
 
 File = str | Path
 Progress = Callable[[int, int, float], None]  # paths done, paths planned, standard error so far (unit of the price)
-REDUCTIONS = ("none",)
 LARGEST_SEED = (1 << 64) - 1
 CONTRACT_BEGINS = "a document that begins 'contract: TITLE'"
 MARKET_BEGINS = "a document that begins 'market: DATE'"
@@ -51,15 +50,17 @@ def price(
 
     At most one of `paths`, `within` (a 95 % half-width: '2bp' or '0.02%' of the notional, '0.01' money per unit) and
     `seconds` decides the number of paths; without any it is 2^20. `seed` None is 1. `threads` None takes all; it
-    changes no digit. `record` names a file to write a valuation record to. `notice` is called with a sentence when
+    changes no digit. `reduction` lists methods of variance reduction, parted by commas ('antithetic,controls'), or is
+    'none', or 'auto' for the choice of a short pilot. `record` names a file to write a valuation record to. `notice` is called with a sentence when
     kernels must be compiled. Raises InputError, RequestError, Refusal.
     """
     from mcx.estimators.plan import DEFAULT_SEED, check_fits, precision
+    from mcx.estimators.reduction.names import wished
 
     asked = precision(paths, within, seconds)
     seed = DEFAULT_SEED if seed is None else _seed(seed)
     threads = _threads(threads)
-    _reduction(reduction)
+    methods = wished(reduction)
     if record is not None:
         from mcx.report.record import check_free
 
@@ -67,7 +68,8 @@ def price(
     made, dated = _dated(files, with_market=True)
     for each in made.contracts:
         check_fits(asked, notional=each.notional is not None, title=each.title)
-    table = _price(made, dated, [asked] * len(dated), [seed] * len(dated), threads, progress, notice)
+    every = len(dated)
+    table = _price(made, dated, [asked] * every, [seed] * every, [methods] * every, threads, progress, notice)
     if record is not None and not table.interrupted:
         from mcx.report.record import make_record, write_record
 
@@ -192,6 +194,7 @@ def replay(
 ) -> Replay:
     """Whether a valuation record reproduces from the texts in it; raises RequestError for what is no whole record."""
     from mcx.estimators.plan import precision
+    from mcx.estimators.reduction.names import NONE, wished
     from mcx.report.record import compare, documents_of, environment, read_record
 
     threads = _threads(threads)
@@ -209,7 +212,8 @@ def replay(
         wishes = [wish_of(*(each[key] for key in ("estimator", "bump", "assets", "spot_moves", "vol_moves"))) for each in runs]
         results = _greeks(made, dated, wishes, asked, seeds, threads, progress, notice).contracts
     else:
-        table = _price(made, dated, asked, seeds, threads, progress, notice)
+        reductions = [wished(each.get("reduction", NONE)) for each in runs]
+        table = _price(made, dated, asked, seeds, reductions, threads, progress, notice)
         if table.interrupted:
             raise KeyboardInterrupt
         results = table.prices
@@ -259,6 +263,7 @@ def _price(
     dated: Sequence[DatedContract],
     asked: Sequence[Precision],
     seeds: Sequence[int],
+    reductions: Sequence[tuple[str, ...]],
     threads: int | None,
     progress: Progress | None,
     notice: Callable[[str], None] | None,
@@ -269,10 +274,11 @@ def _price(
     from mcx.report.summary import price_result
 
     results = []
-    for ready, wish, seed in zip(_ready(made, dated), asked, seeds, strict=True):
+    for ready, wish, seed, reduction in zip(_ready(made, dated), asked, seeds, reductions, strict=True):
         try:
             with _finite(ready):
-                valuation = value(ready, wish, seed=seed, threads=threads, progress=progress, notice=notice)
+                valuation = value(ready, wish, seed=seed, reduction=reduction, threads=threads, progress=progress,
+                                  notice=notice)
         except KeyboardInterrupt:
             if not results:
                 raise
@@ -326,7 +332,7 @@ def _finite(ready: Ready) -> Iterator[None]:
 
 def _ready(made: Request, dated: Sequence[DatedContract]) -> list[Ready]:
     """Every contract as a program on the market; raises InputError with all that the tape refuses."""
-    from mcx.estimators.price import prepare
+    from mcx.estimators.ready import prepare
 
     found = [prepare(each, made.market) for each in dated]
     faults = [fault for _, wrong in found for fault in wrong]
@@ -391,6 +397,8 @@ def _threads(threads: object) -> int | None:
 
 
 def _reduction(reduction: str) -> None:
-    if reduction not in REDUCTIONS:
-        raise RequestError(f"the variance reduction '{reduction}' is not known to this version; it knows 'none', "
-                           f"others come with a later version")
+    from mcx.estimators.reduction.names import wished
+
+    if wished(reduction):
+        raise RequestError(f"the variance reduction of sensitivities is 'none', not {reduction!r}: their estimators choose "
+                           f"their own controls")

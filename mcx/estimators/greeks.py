@@ -20,8 +20,8 @@ from mcx.estimators.differentiate import Bound, Coefficients, pairs_of
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.ladder import Point, Step, grid, ladder
 from mcx.estimators.methods import PATHWISE, Method, methods
-from mcx.estimators.plan import Plan, Precision, plan
-from mcx.estimators.price import Ready
+from mcx.estimators.plan import Independent, Plan, Precision, plan
+from mcx.estimators.ready import Ready
 from mcx.estimators.revalue import Revaluer, central_differences, impossible, second_differences, step_of
 from mcx.estimators.sensitivities import Curvature, Sensitivity, first_order, second_order
 from mcx.estimators.theta import between, theta
@@ -139,9 +139,9 @@ class _Run:
     def _plan(self, asked: Precision) -> Plan:
         program = replace(self.ready.program, outputs=self.ready.program.outputs[:1])
 
-        def prices(paths: int) -> np.ndarray:
-            return values_by_path(program, paths=paths, seed=self.pilot.seed, stream=Stream.PILOT,
-                                  threads=self.pilot.threads)[0]
+        def prices(paths: int) -> Independent:
+            return Independent(values_by_path(program, paths=paths, seed=self.pilot.seed, stream=Stream.PILOT,
+                                              threads=self.pilot.threads)[0])
 
         def seconds_for(paths: int) -> float:
             begun = time.perf_counter()

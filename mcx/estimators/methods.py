@@ -8,7 +8,7 @@ from dataclasses import dataclass, replace
 from mcx.checked.contract import Contract
 from mcx.checked.market import Market
 from mcx.estimators.differentiate import Differentiator, without_first_levels
-from mcx.estimators.price import Ready
+from mcx.estimators.ready import Ready
 from mcx.faults import Refusal
 from mcx.leaves.market_map import MarketMap
 from mcx.tape.ops import Op

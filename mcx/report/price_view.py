@@ -74,6 +74,8 @@ def _facts(result: PriceResult, scale: Scale) -> Iterator[tuple[str, str]]:
     yield "95 % interval", f"{low} to {high}{scale.sign}"
     yield "paths", f"{result.paths:,} in {result.seconds:.2f} s; asked for: {result.planned.asked}"
     yield "seed", f"{result.seed}; variance reduction: {result.reduction}"
+    for number, note in enumerate(result.reduction_notes):
+        yield "" if number else "variance reduction", note
     life = decimals(result.expected_life_standard_error, 2, 2)
     yield "expected life", f"{fixed(result.expected_life, min(life, 4))} years (risk-neutral)"
 

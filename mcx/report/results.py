@@ -116,7 +116,8 @@ class PriceResult(Result):
 
     `notional` or `units` is None. `valuation` is None for textbook markets. `ends` holds how often the contract ended
     early on each date, `reached_maturity` how often it did not, and `expected_life` the years to the payment that ends
-    it. `warnings` are about this run, `assumptions` what was taken as given, `limits` what the model leaves out,
+    it. `reduction` lists the methods of variance reduction, 'none' without, `reduction_notes` what they found; where the
+    paths of a pair or a net are counted, `paths` counts every one. `warnings` are about this run, `assumptions` what was taken as given, `limits` what the model leaves out,
     `cautions` how the number may be used.
     """
 
@@ -136,6 +137,7 @@ class PriceResult(Result):
     seconds: float
     seed: int
     reduction: str
+    reduction_notes: tuple[str, ...]
     interrupted: bool
     planned: Planned
     legs: tuple[Amount, ...]
