@@ -15,7 +15,7 @@ from mcx.faults import Place
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
-from mcx.tape.program import Leaf, LeafKind, LevelKey, Tape
+from mcx.tape.program import Instruction, Leaf, LeafKind, LevelKey, Tape
 
 SAME_TIME = 1e-9  # years: about 0.03 s; dates closer than that are one date, written in two ways
 
@@ -42,6 +42,8 @@ def expand_levels(tape: Tape, nodes: Sequence[float]) -> tuple[Tape, Grid]:
             values.append(walk.level(step.payload, step.place))
         elif step.op in (Op.LOW, Op.HIGH):
             values.append(walk.extreme(step.op, step.payload, step.place))
+        elif step.op is Op.LOG and walk.is_later_level(tape.instructions[step.operands[0]]):
+            values.append(walk.log_level(tape.instructions[step.operands[0]].payload))
         else:
             values.append(walk.builder.copy(step, tuple(values[k] for k in step.operands)))
     outputs = [output.at(values[output.value]) for output in tape.outputs]
@@ -99,6 +101,15 @@ class _Walk:
             return self.builder.leaf(Leaf(LeafKind.FORWARD, asset=key.asset), place)
         self.advance(number)
         return self.builder.emit(Op.EXP, self.log(key.asset, number), place=place)
+
+    def is_later_level(self, step: Instruction) -> bool:
+        return step.op is Op.LEVEL and self.number(step.payload.time) > 0
+
+    def log_level(self, key: LevelKey) -> int:
+        """The log of a level, which is where the level comes from."""
+        number = self.number(key.time)
+        self.advance(number)
+        return self.log(key.asset, number)
 
     def extreme(self, op: Op, key: LevelKey, place: Place | None) -> int:
         self.advance(self.number(key.time))

@@ -18,7 +18,7 @@ from mcx.machine.sizes import cost
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
-from mcx.tape.program import Output, Tape
+from mcx.tape.program import Tape
 
 PILOT_PATHS, LARGEST_PILOT = 1 << 14, 1 << 18
 PATHS_EACH = 40  # of the pilot for each candidate
@@ -155,7 +155,3 @@ def _less(builder: Builder, tape: Tape, outputs: int, value: int, chosen: np.nda
         value = builder.emit(Op.SUB, value, part)
     known = sum(beta * control.mean for beta, control in zip(betas.tolist(), taken, strict=True))
     return builder.emit(Op.ADD, value, builder.constant(known))
-
-
-def control_output(name: str, value: int) -> Output:
-    return Output.of("control", value, name)
