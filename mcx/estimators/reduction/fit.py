@@ -7,14 +7,14 @@ of others have no say, and the coefficients stay small. The same controls serve 
 
 from __future__ import annotations
 
-from dataclasses import replace
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from mcx.estimators.plan import FEWEST_UNLIKE, unlike
 from mcx.estimators.reduction.scheme import Case, Control, Draft, Inapplicable, Scheme
 from mcx.machine.run import Stream, values_by_path
-from mcx.machine.sizes import cost
+from mcx.machine.sizes import cost, op_costs
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
@@ -22,7 +22,9 @@ from mcx.tape.program import Tape
 
 PILOT_PATHS, LARGEST_PILOT = 1 << 14, 1 << 18
 PATHS_EACH = 40  # of the pilot for each candidate
+MOST_NAMED = 6
 MOST_CONTROLS = 48  # chosen; those that must take part come on top
+EXACT = 1e-24  # of the variance: nothing is left but rounding
 INDEPENDENT = 1e-9  # of a candidate's variance must be its own
 MULTIPLY_AND_SUBTRACT = 0.34  # ns a path and output: see `machine/sizes.py`
 CONTROLLED = ("price", "leg", "part")
@@ -38,17 +40,25 @@ def fitted(case: Case, names: tuple[str, ...], draft: Draft) -> Scheme:
     tape = replace(draft.tape, outputs=tuple(draft.tape.outputs[k] for k in (*wanted, *range(len(outputs), _size(draft)))))
     values = _pilot(case, tape, len(draft.controls))
     targets, candidates = values[: len(wanted)].T, values[len(wanted) :].T
-    base = cost(case.ready.lowered(_without_controls(draft.tape, len(outputs))), draft.plan)
-    each = max(cost(case.ready.lowered(draft.tape), draft.plan) - base, 0.0) / len(draft.controls)
-    each += MULTIPLY_AND_SUBTRACT * len(wanted)
-    chosen = chosen_controls(targets[:, 0], candidates, draft.controls, base, each)
+    plain = cost(case.ready.lowered(_without_controls(draft.tape, len(outputs))), draft.plan)
+    costs = Costs(plain, MULTIPLY_AND_SUBTRACT * len({draft.tape.outputs[k].value for k in wanted}),
+                  *_own_work(draft.tape, len(outputs)))
+    chosen = chosen_controls(targets[:, 0], candidates, draft.controls, costs)
+    if not len(chosen) and not any(control.asked for control in draft.controls):  # the methods do without
+        whole = _without_controls(draft.tape, len(outputs))
+        return Scheme(names, case.ready.lowered(whole), draft.plan, draft.each, len(values.T) * draft.each, draft.notes)
     if not len(chosen):
         raise Inapplicable("no control lowers variance times cost")
     betas = coefficients(targets, candidates[:, chosen])
     taken = [draft.controls[k] for k in chosen]
     whole = controlled(draft.tape, len(outputs), wanted, chosen, taken, betas)
-    notes = (*draft.notes, f"controls: {', '.join(control.name for control in taken)}")
+    notes = (*draft.notes, _listed([control.name for control in taken]))
     return Scheme(names, case.ready.lowered(whole), draft.plan, draft.each, len(values.T) * draft.each, notes)
+
+
+def _listed(names: list[str]) -> str:
+    more = f" and {len(names) - MOST_NAMED} more" if len(names) > MOST_NAMED else ""
+    return f"{len(names)} control{'s' * (len(names) > 1)}: {', '.join(names[:MOST_NAMED])}{more}"
 
 
 def _size(draft: Draft) -> int:
@@ -76,11 +86,42 @@ def _pilot(case: Case, tape: Tape, controls: int) -> np.ndarray:
         paths *= 4
 
 
-def chosen_controls(target: np.ndarray, candidates: np.ndarray, controls: tuple[Control, ...], base: float,
-                    each: float) -> np.ndarray:
-    """The numbers of the candidates to take: those that must, and of the others the first so many, by what each adds,
-    that make variance times cost least. target (paths,), candidates (paths, controls); base and each: the costs of a
-    path and of a control on it."""
+@dataclass(frozen=True, slots=True)
+class Costs:
+    """What paths cost, in the nanoseconds of `machine/sizes.py`: `plain` without controls, `each` for taking one off.
+
+    work (instructions,): of each instruction that only controls need; needs (controls, instructions): who needs which.
+    """
+
+    plain: float
+    each: float
+    work: np.ndarray
+    needs: np.ndarray
+
+
+def _own_work(tape: Tape, outputs: int) -> tuple[np.ndarray, np.ndarray]:
+    """`work` and `needs` of a tape whose first outputs are the contract's."""
+    shared = _needed(tape, [output.value for output in tape.outputs[:outputs]])
+    alone = [_needed(tape, [output.value]) for output in tape.outputs[outputs:]]
+    needs = np.array(alone) & ~np.array(shared)
+    used = needs.any(axis=0)
+    return op_costs(tape)[used], needs[:, used]
+
+
+def _needed(tape: Tape, values: list[int]) -> np.ndarray:
+    needed = np.zeros(len(tape.instructions), dtype=bool)
+    waiting = list(values)
+    while waiting:
+        value = waiting.pop()
+        if not needed[value]:
+            needed[value] = True
+            waiting += tape.instructions[value].operands
+    return needed
+
+
+def chosen_controls(target: np.ndarray, candidates: np.ndarray, controls: tuple[Control, ...], costs: Costs) -> np.ndarray:
+    """The numbers of the candidates to take: those that must, and of the others the first so many, each the one that
+    then makes variance times cost least, up to where it is least of all. target (paths,), candidates (paths, controls)."""
     paths = len(target)
     centred = candidates - candidates.mean(axis=0)
     scale = centred.std(axis=0)
@@ -89,33 +130,34 @@ def chosen_controls(target: np.ndarray, candidates: np.ndarray, controls: tuple[
     covariance = centred.T @ centred / paths
     along = centred.T @ (target - target.mean()) / paths
     left = np.where(usable, 1.0, 0.0)
-    variance = float(target.var())
-    must = [k for k, control in enumerate(controls) if control.must and usable[k]]
-    factor = np.zeros((len(covariance), len(must) + MOST_CONTROLS))
-    taken: list[int] = []
-    best, least = len(must) if must else 0, variance * base if not must else np.inf
-    while len(taken) < factor.shape[1]:
-        open_ = left > INDEPENDENT
-        open_[taken] = False
-        if len(taken) < len(must):
-            pivot = must[len(taken)]
-            if not open_[pivot]:
-                must.remove(pivot)
-                best = len(must)
-                continue
-        else:
-            gains = np.where(open_, along**2 / np.where(open_, left, 1.0), 0.0)
-            pivot = int(np.argmax(gains))
-            if gains[pivot] <= 0.0:
-                break
-        column = (covariance[:, pivot] - factor @ factor[pivot]) / np.sqrt(left[pivot])
-        variance -= float(along[pivot] ** 2 / left[pivot])
-        along = along - column * (along[pivot] / np.sqrt(left[pivot]))
-        factor[:, len(taken)] = column
+    variance = whole = float(target.var())
+    must = np.array([control.must for control in controls]) & usable
+    most = int(must.sum()) + MOST_CONTROLS
+    factor = np.zeros((len(covariance), most))
+    open_work = costs.work.copy()
+    spent, taken = costs.plain, []
+    best, least = 0, np.inf if must.any() else variance * spent
+    while len(taken) < most and variance > EXACT * whole:
+        usable[taken] = False
+        usable &= left > INDEPENDENT
+        if not usable.any():
+            break
+        gains = np.where(usable, along**2 / np.where(usable, left, 1.0), 0.0)
+        price = spent + costs.each + costs.needs @ open_work
+        burdens = np.where(usable, np.maximum(variance - gains, 0.0) * price, np.inf)
+        pressing = must & usable
+        pivot = int(np.argmin(np.where(pressing, burdens, np.inf) if pressing.any() else burdens))
+        root = np.sqrt(left[pivot])
+        column = (covariance[:, pivot] - factor @ factor[pivot]) / root
+        variance -= float(gains[pivot])
+        along = along - column * (along[pivot] / root)
         left = left - column**2
+        factor[:, len(taken)] = column
         taken.append(pivot)
-        burden = max(variance, 0.0) * (1.0 + 2.0 * len(taken) / paths) * (base + each * len(taken))
-        if len(taken) >= len(must) and burden < least:
+        spent = float(price[pivot])
+        open_work[costs.needs[pivot]] = 0.0
+        burden = max(variance, 0.0) * (1.0 + 2.0 * len(taken) / paths) * spent
+        if burden < least and not (must & usable)[[k for k in range(len(must)) if k not in taken]].any():
             best, least = len(taken), burden
     return np.array(sorted(taken[:best]), dtype=int)
 

@@ -46,11 +46,16 @@ class Case:
 
 @dataclass(frozen=True, slots=True)
 class Control:
-    """An output of the draft's tape whose mean is known. `must`: it takes part whether it helps alone or not."""
+    """An output of the draft's tape whose mean is known.
+
+    must   it takes part whether it helps alone or not
+    asked  it is what a method is for; where none of these helps the method has nothing to offer
+    """
 
     name: str
     mean: float
     must: bool = False
+    asked: bool = True
 
 
 @dataclass(frozen=True, slots=True)

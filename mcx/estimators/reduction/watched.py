@@ -58,7 +58,24 @@ def watched_candidates(market: Market) -> Iterator[Candidate]:
     """Survival weights, with what may be paid at the end of the watch, and continuous extremes."""
     for watched in _watched(market):
         yield from _survival(market, watched)
-        yield from _extremes(market, watched)
+        yield from _extremes(market, watched, watched.up, watched.level)
+    for asset in _compared_with_itself(market):
+        spot = market.ready.market.forward(market.names[asset], 0.0)
+        watched = _on(market, asset, spot, spot, max(day[1] for day in market.days if day[0] == asset))
+        for up in (False, True):
+            yield from _extremes(market, watched, up, spot)
+
+
+def _compared_with_itself(market: Market) -> list[int]:
+    """Assets whose levels are compared with one another, over several days: their extreme is taken."""
+    days: dict[int, set[Day]] = {}
+    for turn in market.turns:
+        parts = [part for side in (turn.above, turn.below) for product, _ in side for part in product]
+        if len(turn.above) == len(turn.below) == 1 and len(parts) == 2 and parts[0][1] == parts[1][1] == 1.0:
+            (one, _), (other, _) = parts
+            if one[0] == other[0]:
+                days.setdefault(one[0], set()).update((one, other))
+    return [asset for asset, found in sorted(days.items()) if len(found) >= FEWEST_DATES]
 
 
 def _watched(market: Market) -> list[Watched]:
@@ -135,19 +152,17 @@ def _strikes_at(market: Market, day: Day) -> list[float]:
                    if not turn.below and len(turn.above) == 1 and turn.above[0][0] == ((day, 1.0),)})
 
 
-def _extremes(market: Market, watched: Watched) -> Iterator[Candidate]:
-    """The continuous extreme itself, moved in, and the option on it at the level."""
-    if watched.drift is None:
+def _extremes(market: Market, watched: Watched, up: bool, level: float) -> Iterator[Candidate]:
+    """What the continuous extreme, moved in, is beyond a level."""
+    if watched.drift is None or not np.all(watched.variances > 0.0):
         return
     emit, constant = market.builder.emit, market.builder.constant
     end, start, variance = watched.days[-1][1], math.log(watched.spot), float(watched.variances.sum())
-    inward = math.exp(-SHIFT * math.sqrt(float(watched.variances.mean())) * (1.0 if watched.up else -1.0))
-    op = Op.HIGH if watched.up else Op.LOW
-    extreme = market.scaled(market.builder.input(op, LevelKey(watched.asset, end, 0.0)), inward)
-    mean = extreme_call_mean if watched.up else extreme_put_mean
-    emitted = emit(Op.SUB, extreme, constant(watched.level))
-    gain = emit(Op.MAX, emitted if watched.up else emit(Op.NEG, emitted), constant(0.0))
-    exact = inward * mean(start, watched.drift, variance, watched.level / inward)
-    side = "highest" if watched.up else "lowest"
-    yield Candidate(Control(f"option on the {side} of {market.names[watched.asset]} by {end:.4g}y at {watched.level:.6g}",
+    inward = math.exp(SHIFT * math.sqrt(float(watched.variances.mean())) * (-1.0 if up else 1.0))
+    extreme = market.scaled(market.builder.input(Op.HIGH if up else Op.LOW, LevelKey(watched.asset, end, 0.0)), inward)
+    beyond = emit(Op.SUB, extreme, constant(level))
+    gain = emit(Op.MAX, beyond if up else emit(Op.NEG, beyond), constant(0.0))
+    exact = inward * (extreme_call_mean if up else extreme_put_mean)(start, watched.drift, variance, level / inward)
+    side = "highest" if up else "lowest"
+    yield Candidate(Control(f"option on the {side} of {market.names[watched.asset]} by {end:.4g}y at {level:.6g}",
                             exact / watched.spot), market.scaled(gain, 1.0 / watched.spot))
