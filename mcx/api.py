@@ -25,10 +25,12 @@ if TYPE_CHECKING:
     from mcx.estimators.plan import Precision
     from mcx.estimators.ready import Ready
     from mcx.report.greek_results import GreeksResult, GreeksTable
+    from mcx.report.method_results import MethodsResult, MethodsTable
     from mcx.report.results import Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay
 
 File = str | Path
 Progress = Callable[[int, int, float], None]  # paths done, paths planned, standard error so far (unit of the price)
+METHOD_SECONDS = 1.0  # for each choice of methods, where nothing is asked
 LARGEST_SEED = (1 << 64) - 1
 CONTRACT_BEGINS = "a document that begins 'contract: TITLE'"
 MARKET_BEGINS = "a document that begins 'market: DATE'"
@@ -128,6 +130,49 @@ def greeks(
 
         write_record(record, make_record(_sources(made), [each.to_dict() for each in table.contracts], "greeks"))
     return table.contracts[0] if len(made.contracts) == 1 else table
+
+
+def methods(
+    *files: File,
+    paths: int | None = None,
+    seconds: float | None = None,
+    seed: int | None = None,
+    threads: int | None = None,
+    picture: File | None = None,
+    notice: Callable[[str], None] | None = None,
+) -> MethodsResult | MethodsTable:
+    """Which variance reduction pays on every contract in the files: one result, or a table of several.
+
+    Every choice of methods that applies runs for `seconds` (1 without), or for `paths`. `picture` names a file, .png or
+    .svg, to draw the error against time in, for one contract. Raises InputError, RequestError, Refusal.
+    """
+    from mcx.estimators.plan import DEFAULT_SEED, precision
+
+    asked = precision(paths, None, seconds if paths is not None or seconds is not None else METHOD_SECONDS)
+    seed = DEFAULT_SEED if seed is None else _seed(seed)
+    threads = _threads(threads)
+    if picture is not None:
+        from mcx.report.picture import check_picture
+
+        check_picture(picture)
+    made, dated = _dated(files, with_market=True)
+    if picture is not None and len(dated) > 1:
+        raise RequestError(f"a picture shows one contract; the files hold {len(dated)}")
+    from mcx.estimators.reduction.comparison import compare
+    from mcx.estimators.reduction.scheme import Case
+    from mcx.report.method_results import MethodsTable
+    from mcx.report.method_summary import methods_result
+
+    results = []
+    for ready in _ready(made, dated):
+        with _finite(ready):
+            found, refused = compare(Case(ready, seed, threads, notice), asked.seconds, asked.paths)
+        results.append(methods_result(ready, found, refused, seed, asked.words))
+    if picture is not None:
+        from mcx.report.picture import draw_methods
+
+        draw_methods(results[0], picture)
+    return results[0] if len(results) == 1 else MethodsTable(tuple(results))
 
 
 def readback(*files: File, path: File | None = None) -> Readback | ReadbackTable:

@@ -130,6 +130,23 @@ def greeks(files: tuple[str, ...], as_json: bool, ladder: bool, grid: bool, spot
 
 @cli.command()
 @FILES
+@click.option("--paths", type=int, help="Paths for each choice, in place of a time.")
+@click.option("--seconds", type=float, help="Time for each choice.  [1]")
+@click.option("--seed", type=int, help="Seed of the random numbers.  [1]")
+@THREADS
+@AS_JSON
+@click.option("--picture", type=click.Path(), metavar="FILE", help="Draw error against time, as .png or .svg.")
+def methods(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
+    """Which variance reduction pays? Every choice that applies, each for the same time."""
+    from mcx import api
+
+    with _progress() as (_, notice):
+        result = api.methods(*files, notice=notice, **wishes)
+    _show(result, as_json, _methods_view)
+
+
+@cli.command()
+@FILES
 @click.option("--path", type=click.Path(), help="Levels (YAML or CSV) to run through the contract.")
 @AS_JSON
 def readback(files: tuple[str, ...], path: str | None, as_json: bool) -> None:
@@ -248,6 +265,16 @@ def _greeks_view(result: Result, page: Page) -> None:
         if number:
             page.line()
         show_greeks(each, page)
+
+
+def _methods_view(result: Result, page: Page) -> None:
+    from mcx.report.method_results import MethodsTable
+    from mcx.report.method_view import show_methods
+
+    for number, each in enumerate(result.contracts if isinstance(result, MethodsTable) else (result,)):
+        if number:
+            page.line()
+        show_methods(each, page)
 
 
 def _readback_view(result: Result, page: Page) -> None:

@@ -10,6 +10,8 @@ from mcx.estimators.estimate import Estimate
 from mcx.estimators.plan import Plan, Precision, plan
 from mcx.estimators.ready import Ready
 from mcx.estimators.reduction.catalogue import scheme_of
+from mcx.estimators.reduction.choice import best
+from mcx.estimators.reduction.names import AUTO
 from mcx.estimators.reduction.sample import Sampler
 from mcx.estimators.reduction.scheme import Case, Scheme
 from mcx.machine.run import Notice, Stream
@@ -64,7 +66,7 @@ def value(
     """
     assert ready.unrolled.tape.outputs[0].kind == "price", "the price is the first output"
     case = Case(ready, seed, threads, notice)
-    scheme = scheme_of(case, reduction)
+    scheme = best(case) if reduction == (AUTO,) else scheme_of(case, reduction)
     return sampled(ready, scheme, asked, seed=seed, threads=threads, progress=progress, notice=notice)
 
 

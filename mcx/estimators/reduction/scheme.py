@@ -107,6 +107,9 @@ class Scheme:
     fit_paths: int = 0
     notes: tuple[str, ...] = ()
 
+    def noted(self, *notes: str) -> Scheme:
+        return replace(self, notes=(*self.notes, *notes))
+
     @property
     def label(self) -> str:
         """The methods as they are written in a request."""
