@@ -11,7 +11,9 @@ from mcx.estimators.plan import Plan, Precision, plan
 from mcx.estimators.ready import Ready
 from mcx.estimators.reduction.catalogue import scheme_of
 from mcx.estimators.reduction.choice import best
+from mcx.estimators.reduction.hedge import HEDGE
 from mcx.estimators.reduction.names import AUTO
+from mcx.estimators.reduction.residual import Residual, residuals
 from mcx.estimators.reduction.sample import Sampler
 from mcx.estimators.reduction.scheme import Case, Scheme
 from mcx.machine.run import Notice, Stream
@@ -25,7 +27,8 @@ class Valuation:
     """Every output of a contract's tape with its error.
 
     outputs and results belong together, price first; `stages` is the price at a quarter, half and all of the paths;
-    `seconds` the time of the main run; `reduction` the methods of variance reduction, `notes` what they found.
+    `seconds` the time of the main run; `reduction` the methods of variance reduction, `notes` what they found;
+    `hedge`, where gains of a hedge are among them, what a hedger is left with.
     """
 
     outputs: tuple[Output, ...]
@@ -37,6 +40,7 @@ class Valuation:
     interrupted: bool
     reduction: tuple[str, ...] = ()
     notes: tuple[str, ...] = ()
+    hedge: tuple[Residual, ...] = ()
 
     @property
     def price(self) -> Estimate:
@@ -67,7 +71,8 @@ def value(
     assert ready.unrolled.tape.outputs[0].kind == "price", "the price is the first output"
     case = Case(ready, seed, threads, notice)
     scheme = best(case) if reduction == (AUTO,) else scheme_of(case, reduction)
-    return sampled(ready, scheme, asked, seed=seed, threads=threads, progress=progress, notice=notice)
+    found = sampled(ready, scheme, asked, seed=seed, threads=threads, progress=progress, notice=notice)
+    return replace(found, hedge=residuals(case)) if HEDGE.name in scheme.names else found
 
 
 def sampled(ready: Ready, scheme: Scheme, asked: Precision, *, seed: int, threads: int | None = None,

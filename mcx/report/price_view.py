@@ -50,6 +50,8 @@ def show_price(result: PriceResult, page: Page) -> None:
     if result.parts:
         page.heading("parts")
         page.table(("part", scale.unit, "standard error", result.currency), _amounts(result.parts, result, scale))
+    if result.hedge:
+        _hedge(result, scale, page)
     if result.conditions or result.ends:
         page.heading(PROBABILITIES)
         _probabilities(result, page)
@@ -87,6 +89,15 @@ def _amounts(amounts: Sequence[Amount], result: PriceResult, scale: Scale) -> It
     if len(amounts) > 1:
         price, error = (scale.show(number, places) for number in (result.price, result.standard_error))
         yield ("sum", price, error, fixed(result.value, 2))
+
+
+def _hedge(result: PriceResult, scale: Scale, page: Page) -> None:
+    page.heading("what a hedger is left with (standard deviation)")
+    places = scale.places(max(each.standard_error for each in result.hedge))
+    page.table(("traded on", scale.unit, "standard error"), (
+        (f"{each.dates} date{'' if each.dates == 1 else 's'}", scale.show(each.deviation, places),
+         scale.show(each.standard_error, places)) for each in result.hedge))
+    page.line("  deltas regressed on what is known on each date; under the pricing measure, without costs")
 
 
 def _probabilities(result: PriceResult, page: Page) -> None:

@@ -8,6 +8,7 @@ from dataclasses import replace
 from mcx.estimators.reduction.antithetic import ANTITHETIC
 from mcx.estimators.reduction.controls import CONTROLS
 from mcx.estimators.reduction.fit import fitted
+from mcx.estimators.reduction.hedge import HEDGE
 from mcx.estimators.reduction.importance import IMPORTANCE
 from mcx.estimators.reduction.points import BRIDGE, COMPONENTS
 from mcx.estimators.reduction.scheme import Case, Draft, Inapplicable, Method, Scheme, Stage
@@ -15,7 +16,7 @@ from mcx.estimators.reduction.stratified import STRATIFIED
 from mcx.faults import Refusal, RequestError
 from mcx.tape.steps import expand_levels
 
-METHODS: tuple[Method, ...] = (CONTROLS, IMPORTANCE, ANTITHETIC, STRATIFIED, BRIDGE, COMPONENTS)
+METHODS: tuple[Method, ...] = (CONTROLS, HEDGE, IMPORTANCE, ANTITHETIC, STRATIFIED, BRIDGE, COMPONENTS)
 BY_NAME = {method.name: method for method in METHODS}
 
 

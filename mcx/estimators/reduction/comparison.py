@@ -21,7 +21,7 @@ from mcx.estimators.reduction.scheme import Case, Scheme
 from mcx.faults import Refusal
 from mcx.machine.run import Stream
 
-COMPARED = (*CHOICES, ("antithetic", "sobol-bridge"))
+COMPARED = (*CHOICES, ("antithetic", "sobol-bridge"), ("hedge",), ("controls", "hedge"))
 SHORTER = (64, 16, 4)  # shares of the run that the error is also noted at
 EXACT = 1e-12  # of the price: an error below is rounding
 

@@ -11,7 +11,7 @@ from mcx.tape.program import Output
 
 
 def change(case: Case, draft: Draft) -> Draft:
-    market = Market(case.ready)
+    market = Market(case.ready)  # the first of its stage: the draft's tape is still the contract's
     if not market.days:
         raise Inapplicable("no level is read after today")
     found = {candidate.value: candidate for candidate in (*candidates(market), *watched_candidates(market))}
