@@ -8,8 +8,7 @@ after the documents are known to be sound.
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Iterable, Iterator, Sequence
-from contextlib import contextmanager
+from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -21,6 +20,7 @@ from mcx.text.documents import read_documents
 from mcx.text.located import Document
 
 if TYPE_CHECKING:
+    from mcx.checked.market import Market
     from mcx.estimators.greeks import Wish
     from mcx.estimators.plan import Precision
     from mcx.estimators.ready import Ready
@@ -124,8 +124,9 @@ def greeks(
         for name in wish.assets:
             if name not in each.assets:
                 raise RequestError(f"'{each.title}' has no asset '{name}'{did_you_mean(name, each.assets)}")
-    table = _greeks(made, dated, [wish] * len(dated), [asked] * len(dated), [seed] * len(dated), threads, progress, notice)
-    if record is not None:
+    count = len(dated)
+    table = _greeks(made, dated, [wish] * count, [asked] * count, [seed] * count, threads, progress, notice)
+    if record is not None and not table.interrupted:
         from mcx.report.record import make_record, write_record
 
         write_record(record, make_record(_sources(made), [each.to_dict() for each in table.contracts], "greeks"))
@@ -165,7 +166,7 @@ def methods(
 
     results = []
     for ready in _ready(made, dated):
-        with _finite(ready):
+        with finite(ready):
             found, refused = compare(Case(ready, seed, threads, notice), asked.seconds, asked.paths)
         results.append(methods_result(ready, found, refused, seed, asked.words))
     if picture is not None:
@@ -187,6 +188,8 @@ def readback(*files: File, path: File | None = None) -> Readback | ReadbackTable
     made, dated = _dated(files, with_market=False)
     if path is not None and len(dated) > 1:
         raise RequestError(f"levels can be run through one contract at a time; the files hold {len(dated)}")
+    if made.market is not None:
+        _check_dividends(made.market, dated)
     given = None if path is None else _on_levels(dated[0], path)
     found = tuple(read_back(each, made.market, given) for each in dated)
     return found[0] if len(found) == 1 else ReadbackTable(found)
@@ -254,14 +257,16 @@ def replay(
     if stored.get("verb", "price") == "greeks":
         from mcx.estimators.wishes import wish_of
 
-        wishes = [wish_of(*(each[key] for key in ("estimator", "bump", "assets", "spot_moves", "vol_moves"))) for each in runs]
-        results = _greeks(made, dated, wishes, asked, seeds, threads, progress, notice).contracts
+        keys = ("estimator", "bump", "assets", "spot_moves", "vol_moves")
+        wishes = [wish_of(*(each[key] for key in keys)) for each in runs]
+        table = _greeks(made, dated, wishes, asked, seeds, threads, progress, notice)
+        results = table.contracts
     else:
         reductions = [wished(each.get("reduction", NONE)) for each in runs]
         table = _price(made, dated, asked, seeds, reductions, threads, progress, notice)
-        if table.interrupted:
-            raise KeyboardInterrupt
         results = table.prices
+    if table.interrupted:
+        raise KeyboardInterrupt
     return compare(stored, [each.to_dict() for each in results], environment())
 
 
@@ -303,6 +308,15 @@ def _watches_refused(dated: Iterable[DatedContract]) -> list[Fault]:
     return [fault for each in watched for fault in unroll(each, nodes=()).faults]
 
 
+def _check_dividends(market: Market, dated: Iterable[DatedContract]) -> None:
+    """Raises InputError where cash dividends are worth as much as the spot."""
+    from mcx.leaves.market_map import MarketMap
+
+    faults = [fault for each in dated for fault in MarketMap.of(market, each).faults()]
+    if faults:
+        raise InputError(faults)
+
+
 def _price(
     made: Request,
     dated: Sequence[DatedContract],
@@ -314,6 +328,7 @@ def _price(
     notice: Callable[[str], None] | None,
 ) -> PriceTable:
     """Every contract valued; after an interruption those so far. Raises KeyboardInterrupt if that is none."""
+    from mcx.estimators.finite import finite
     from mcx.estimators.price import value
     from mcx.report.results import PriceTable
     from mcx.report.summary import price_result
@@ -321,7 +336,7 @@ def _price(
     results = []
     for ready, wish, seed, reduction in zip(_ready(made, dated), asked, seeds, reductions, strict=True):
         try:
-            with _finite(ready):
+            with finite(ready):
                 valuation = value(ready, wish, seed=seed, reduction=reduction, threads=threads, progress=progress,
                                   notice=notice)
         except KeyboardInterrupt:
@@ -344,35 +359,26 @@ def _greeks(
     progress: Progress | None,
     notice: Callable[[str], None] | None,
 ) -> GreeksTable:
-    """The sensitivities of every contract."""
+    """The sensitivities of every contract; after an interruption those so far."""
+    from mcx.estimators.finite import finite
     from mcx.estimators.greeks import sensitivities
     from mcx.report.greek_results import GreeksTable
     from mcx.report.greek_summary import greeks_result
 
     results = []
     for ready, wish, precision, seed in zip(_ready(made, dated), wishes, asked, seeds, strict=True):
-        with _finite(ready):
-            found = sensitivities(ready, made.market, wish, precision, seed=seed, threads=threads, progress=progress,
-                                  notice=notice)
+        try:
+            with finite(ready):
+                found = sensitivities(ready, made.market, wish, precision, seed=seed, threads=threads,
+                                      progress=progress, notice=notice)
+        except KeyboardInterrupt:
+            if not results:
+                raise
+            break
         results.append(greeks_result(ready, made.market, wish, found))
-    return GreeksTable(tuple(results))
-
-
-@contextmanager
-def _finite(ready: Ready) -> Iterator[None]:
-    """Turns a number that is not finite into a refusal that names the path."""
-    from mcx.machine.run import NonFinitePath, NonFiniteSum
-
-    why = "a formula divides by 0, overflows or leaves the domain of log, sqrt or a power"
-    try:
-        yield
-    except NonFinitePath as trouble:
-        output = ready.unrolled.tape.outputs[trouble.output if trouble.stream == 0 else 0].name
-        raise Refusal(f"'{ready.dated.contract.title}': '{output}' is not a finite number on path {trouble.path} (seed "
-                      f"{trouble.seed}, stream {trouble.stream}); {why}") from None
-    except NonFiniteSum as trouble:
-        raise Refusal(f"'{ready.dated.contract.title}': a derivative is not a finite number on one of the 64 paths from "
-                      f"{trouble.first_path} on (seed {trouble.seed}, stream {trouble.stream}); {why}") from None
+        if found.interrupted:
+            break
+    return GreeksTable(tuple(results), tuple(each.contract.title for each in dated[len(results):]))
 
 
 def _ready(made: Request, dated: Sequence[DatedContract]) -> list[Ready]:

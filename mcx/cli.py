@@ -97,10 +97,7 @@ def price(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
     with _progress() as (progress, notice):
         result = api.price(*files, progress=progress, notice=notice, **wishes)
     _show(result, as_json, _price_view)
-    if result.interrupted:
-        if wishes["record"]:
-            _complain("interrupted: no record was written")
-        sys.exit(INTERRUPTED)
+    _end_if_interrupted(result, wishes["record"])
 
 
 @cli.command()
@@ -122,10 +119,12 @@ def greeks(files: tuple[str, ...], as_json: bool, ladder: bool, grid: bool, spot
 
     if vol_moves is not None and not grid or spot_moves is not None and not (ladder or grid):
         raise click.UsageError("'--spot-moves' goes with '--ladder' or '--grid', '--vol-moves' with '--grid'")
-    moves = {"spot_moves": spot_moves or MOVES if ladder or grid else (), "vol_moves": vol_moves or MOVES if grid else ()}
+    moves = {"spot_moves": (MOVES if spot_moves is None else spot_moves) if ladder or grid else (),
+             "vol_moves": (MOVES if vol_moves is None else vol_moves) if grid else ()}
     with _progress() as (progress, notice):
         result = api.greeks(*files, progress=progress, notice=notice, **moves, **wishes)
     _show(result, as_json, _greeks_view)
+    _end_if_interrupted(result, wishes["record"])
 
 
 @cli.command()
@@ -209,9 +208,9 @@ def main(arguments: list[str] | None = None) -> None:
         _complain(str(trouble))
         sys.exit(WRONG)
     except click.ClickException as trouble:
-        context = getattr(trouble, "ctx", None)
-        hint = f" (see '{context.command_path} --help')" if context else ""
-        _complain(f"{trouble.format_message().rstrip('.')}{hint}")
+        context, said = getattr(trouble, "ctx", None), trouble.format_message().rstrip(".")
+        hint = f" (see '{context.command_path} --help')" if context and "\n" not in said else ""  # many lines: the help
+        _complain(f"{said}{hint}")
         sys.exit(WRONG)
     except (KeyboardInterrupt, click.Abort):
         _complain("interrupted before there was an estimate")
@@ -228,6 +227,13 @@ def main(arguments: list[str] | None = None) -> None:
 def _stop_writing() -> None:
     """What is still waiting for standard output goes nowhere, so that the end of the process cannot fail on it."""
     os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+
+
+def _end_if_interrupted(result: Result, record: str | None) -> None:
+    if result.interrupted:
+        if record:
+            _complain("interrupted: no record was written")
+        sys.exit(INTERRUPTED)
 
 
 def _complain(text: str) -> None:

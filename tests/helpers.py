@@ -96,8 +96,9 @@ def ready_of(request: Request, number: int = 0) -> Ready:
     contract, market = request.contracts[number], request.market
     dated, faults = date_contract(contract, market.valuation)
     assert dated is not None, "\n".join(map(str, faults))
-    leaves = MarketMap(market, contract)
-    unrolled = unroll(dated, nodes=leaves.nodes())
+    leaves = MarketMap.of(market, dated)
+    assert not leaves.faults(), "\n".join(map(str, leaves.faults()))
+    unrolled = unroll(dated, nodes=leaves.nodes(), makeup=leaves.makeup())
     assert not unrolled.faults, "\n".join(map(str, unrolled.faults))
     return Ready(dated, market, unrolled, lower(unrolled.tape, leaves.values(unrolled.tape.leaves)))
 

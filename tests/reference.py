@@ -252,8 +252,12 @@ class Reference:
 
     def __init__(self, dated: DatedContract, market: Market, grid: Sequence[float], assets: Sequence[int]):
         self.dated, self.grid, self.assets = dated, tuple(grid), tuple(assets)
-        self.market = PlainMarket(market, dated.contract)
-        self.spots = tuple(asset.spot.value for asset in self.market.assets)
+        self.market = PlainMarket(market, dated.contract, max(grid, default=0.0))
+        self.rates = [self.market.row_of_rate(number) for number in range(len(self.market.assets))]
+        self.spots = tuple(asset.spot.value * (1.0 if rate is None else self.market.start(rate))
+                           for asset, rate in zip(self.market.assets, self.rates, strict=True))
+        self.starts = {row: math.log(self.market.start(row)) for row in assets}
+        self.escrows = [bool(self.market.cash(number)) for number in range(len(self.market.assets))]
         self.steps = [self.market.step(assets, start, end) for start, end in zip((0.0, *grid), grid, strict=False)]
         self.moments: dict[float, list[Moment]] = {}
         for moment in dated.moments:
@@ -296,10 +300,10 @@ class Reference:
     def path(self, normal: Callable[[int, int], float], uniform: Callable[[int, int, str], float]) -> Result:
         """What the contract pays on one path.
 
-        `normal(step, k)` is the normal of the k-th moving asset in a step, `uniform(step, asset, side)` the uniform of a watched extreme
-        inside it, side 'low' or 'high'.
+        `normal(step, k)` is the normal of the k-th moving asset in a step, `uniform(step, asset, side)` the uniform of
+        a watched extreme inside it, side 'low' or 'high'.
         """
-        walk, levels = Walk(self.dated, self.market), self.spots
+        walk, levels, logs = Walk(self.dated, self.market), self.spots, dict(self.starts)
         walk.result.life = max((day.time for moment in self.dated.moments for event in moment.events
                                 for day in event.due.values()), default=0.0)
         starts = {self.snap(watch.start.time) for watch in self.dated.watches}
@@ -307,27 +311,45 @@ class Reference:
             low = high = None
             if time in self.grid:
                 step = self.grid.index(time)
-                levels, low, high = self.advance(step, levels, normal, uniform)
+                levels, low, high = self.advance(step, levels, logs, normal, uniform)
             known = time <= 0.0 or time in self.grid
             if self.live(walk, time, plain(levels) if known else None, low, high):
                 break
         return walk.result
 
-    def advance(self, step: int, levels: tuple[float, ...], normal: Callable[[int, int], float],
+    def advance(self, step: int, levels: tuple[float, ...], logs: dict[int, float], normal: Callable[[int, int], float],
                 uniform: Callable[[int, int, str], float]) -> tuple[tuple[float, ...], Value, Value]:
-        """Levels at the end of a step, and the lowest and highest inside it where they are watched."""
-        numbers, before = self.steps[step], [math.log(level) for level in levels]
-        after, variances = list(before), dict(zip(self.assets, numbers.variances, strict=True))
-        for asset, drift, row in zip(self.assets, numbers.drifts, numbers.factor, strict=True):
-            after[asset] += drift + sum(weight * normal(step, k) for k, weight in enumerate(row) if weight)
+        """Levels at the end of a step, and the lowest and highest inside it where they are watched; moves the logs of
+        what is simulated on."""
+        numbers, time, before = self.steps[step], self.grid[step], dict(logs)
+        for row, drift, weights in zip(self.assets, numbers.drifts, numbers.factor, strict=True):
+            logs[row] += drift + sum(weight * normal(step, k) for k, weight in enumerate(weights) if weight)
+        after = list(levels)
+        for asset in range(len(levels)):
+            if asset in logs:
+                after[asset] = math.exp(logs[asset]) + (self.market.escrow(asset, time) if self.escrows[asset] else 0.0)
+                after[asset] *= 1.0 if self.rates[asset] is None else math.exp(logs[self.rates[asset]])
         low, high = list(after), list(after)
         for asset, side in sorted(self.watched_in(step)):
-            ends = (before[asset], after[asset], variances[asset], uniform(step, asset, side))
+            found = self.extreme(step, asset, side, before, logs, uniform(step, asset, side))
             if side == "low":
-                low[asset] = bridge_low(*ends)
+                low[asset] = min(found, levels[asset], after[asset])
             else:
-                high[asset] = bridge_high(*ends)
-        return tuple(map(math.exp, after)), plain([*map(math.exp, low)]), plain([*map(math.exp, high)])
+                high[asset] = max(found, levels[asset], after[asset])
+        return tuple(after), plain(low), plain(high)
+
+    def extreme(self, step: int, asset: int, side: str, before: dict[int, float], after: dict[int, float],
+                uniform: float) -> float:
+        """The lowest or highest level inside a step, until just before a dividend at its end."""
+        market, start, end = self.market, (0.0, *self.grid)[step], self.grid[step]
+        rows = [asset] if self.rates[asset] is None else [asset, self.rates[asset]]
+        variance = sum(market.covariance(one, other, start, end) for one in rows for other in rows)
+        ends = sum(before[row] for row in rows), sum(after[row] for row in rows) - market.jump(asset, end)
+        bridge = bridge_low if side == "low" else bridge_high
+        level = math.exp(bridge(*ends, variance, uniform))
+        if not self.escrows[asset]:
+            return level
+        return level + (market.escrow(asset, start) + market.escrow(asset, end, before=True)) / 2
 
     def watched_in(self, step: int) -> set[tuple[int, str]]:
         """The assets and sides that are watched inside a step."""

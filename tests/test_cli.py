@@ -178,8 +178,7 @@ def test_payoffs():
     """All of them by name, whole words even where a name is long; one in full as its file has it."""
     listed = mcx("payoffs")
     assert listed.code == 0 and len(mcx("payoffs", "--json").json["payoffs"]) == len(shipped_names())
-    text = "".join(line[:24].strip() for line in listed.out.splitlines())
-    assert all(name in text for name in shipped_names())
+    assert all(f"\n{name}  " in f"\n{listed.out}" for name in shipped_names())
     one = mcx("payoffs", "autocall")
     assert (one.code, one.out) == (0, (EXAMPLES.parent / "autocall.yaml").read_text(encoding="utf-8"))
     found = mcx("payoffs", "autocall", "--json").json
@@ -197,6 +196,12 @@ def test_unknown_names():
     """A word that is near, or where to look."""
     refused(mcx("payoffs", "autocal"), "no payoff 'autocal' in the library; did you mean 'autocall'?")
     refused(mcx("prise"), "No such command 'prise'")
+
+
+def test_no_command():
+    """The help as it is, without a word where to find it."""
+    outcome = mcx()
+    assert outcome.code != 0 and outcome.err.strip() == mcx("--help").out.strip()
 
 
 @pytest.mark.parametrize("command", [(), ("price",), ("readback",), ("payoffs",), ("replay",)])

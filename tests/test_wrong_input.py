@@ -122,15 +122,18 @@ SLIPS = {
         "23:11: the market has no rates for 'CHF'; it has 'EUR'",
         "39:10: no funding spread for 'CHF', the currency of the note 'Harbour, lantern and quarry averaging note'; "
         "write 'funding: {CHF: 0 bp}' to value it without the issuer's spread",
-        *(f"{line}:3: '{name}' is quoted in EUR, but 'Harbour, lantern and quarry averaging note' pays in CHF; paying "
-          "in another currency (quanto) is for a later version"
+        *(f"{line}:3: '{name}' is quoted in EUR, but 'Harbour, lantern and quarry averaging note' pays in CHF; write "
+          f"in the contract 'conversion: {{{name}: quanto}}' (paid at a fixed rate) or '{{{name}: composite}}' "
+          "(converted at the rate of the day)"
           for line, name in ((41, "harbour"), (42, "lantern"), (43, "quarry")))),
     "falling total variance": ("3y: 19%", "3y: 10%",
                                "41:74: total variance falls from 0.0324 at '1y' to 0.0300274 at '3y'; a vol of "
                                "10.3876% is the least that '3y' can have"),
     "correlation out of range": ("65%, harbour/q", "165%, harbour/q",
                                  "44:32: expected a correlation from -100% to 100%, found '165%'"),
-    "no correlation": (", lantern/quarry: 50%", "", "44:14: no correlation for 'lantern/quarry'"),
+    "no correlation": (", lantern/quarry: 50%", "",
+                       "44:14: no correlation for 'lantern/quarry'; write 'lantern/quarry: NUMBER%' under "
+                       "'correlation'"),
     "negative vol": ("vol: 22%", "vol: -22%", "42:57: expected a vol above 0% and up to 300%, found '-22%'"),
     "negative spot": ("spot: 801.1", "spot: -801.1", "42:19: expected an amount above 0, found '-801.1'"),
     "not finite": ("spot: 801.1", "spot: .nan", "42:19: expected a finite number, found '.nan'"),

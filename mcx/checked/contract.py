@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import datetime
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import TypeAlias
 
 from mcx.checked.payoff import Payoff
@@ -39,6 +39,7 @@ class DayRule:
     start: DayRef | None = None
     every: Period | None = None
     count: int | None = None
+    end_of_month: bool = False  # every step is the last day of its month
 
 
 @dataclass(frozen=True, slots=True)
@@ -92,12 +93,18 @@ def place_of(value: TermValue, position: int) -> Place:
 
 @dataclass(frozen=True, slots=True)
 class BusinessDays:
-    """Which days are good (`holidays`: a financial calendar's name, or 'none' for weekends only) and how others roll
-    ('following', 'modified following', 'preceding')."""
+    """Which days are good and how others roll ('following', 'modified following', 'preceding').
 
-    holidays: str
+    `holidays` are names of financial calendars, or 'none' alone for weekends only, each with its place in `places`; a
+    day is good if all of them are open, or any with `in_any`. `extra` are holidays that the contract lists itself.
+    """
+
+    holidays: tuple[str, ...]
     roll: str
     place: Place
+    places: tuple[Place, ...]
+    in_any: bool = False
+    extra: tuple[datetime.date, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -121,7 +128,9 @@ class Contract:
     day_count: str = ""
     settlement: Period | None = None
     calendar: BusinessDays | None = None
+    payment_calendar: BusinessDays | None = None  # None: payments go by `calendar`
     textbook: bool = False
+    conversion: dict[str, str] = field(default_factory=dict)  # 'quanto' or 'composite', by asset
     text: str = ""
     assumptions: tuple[str, ...] = ()
     at_fault: frozenset[str] = frozenset()

@@ -9,10 +9,11 @@ from __future__ import annotations
 import datetime
 import math
 from collections.abc import Callable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
-from mcx.checked.market import Curve, Node as Point, Quoted
-from mcx.checked.reading import check_keys, later_version, read, text_of, value_of
+from mcx.checked.day_count_names import day_count_name
+from mcx.checked.market import Curve, Node as Point, Quoted, RateConvention
+from mcx.checked.reading import check_keys, later_version, one_of, read, text_of, value_of
 from mcx.checked.values import amount
 from mcx.faults import Fault
 from mcx.text.located import Mapping, Node, Scalar
@@ -23,6 +24,8 @@ DAYS = {"day": 1, "week": 7}
 LEAST_RATE, MOST_RATE = -0.5, 1.0
 MOST_VOL = 3.0
 MOST_DISCOUNT = 1.5
+COMPOUNDING = ("continuous", "annual", "simple")
+FLAT_DAY_COUNTS = ("Actual/365 (Fixed)", "Actual/360")  # those by which a year is always as long
 
 Number = Callable[[Node], float | Fault]
 
@@ -96,6 +99,8 @@ class MarketReader:
             return None if flat is None else Curve(form, (Point(0.0, "", flat),), node.place)
         if "discount_factors" in node:
             return self._factors(node, factors)
+        if "zero_rates" in node:
+            return self._zero_rates(node, factors)
         return self.curve_of(node, form)
 
     def _factors(self, node: Mapping, factors: bool) -> Curve | None:
@@ -110,6 +115,38 @@ class MarketReader:
         else:
             self.faults.append(expected("discount factors by tenor or date, as '{1y: 0.979}'", inner))
         return None
+
+    def _zero_rates(self, node: Mapping, allowed: bool) -> Curve | None:
+        """`{zero_rates:, compounding:, day_count:}`: zero rates with the convention that they are quoted by."""
+        if not allowed:
+            self.faults.append(Fault(node.key("zero_rates").place, "a compounding can be stated for rates only"))
+            return None
+        if not check_keys(node, ("day_count",), ("zero_rates", "compounding"), self.faults, "the curve"):
+            return None
+        before = len(self.faults)
+        compounding = one_of(node.get("compounding"), COMPOUNDING, self.faults, "a compounding")
+        day_count = read(node, "day_count", day_count_name, self.faults) or RateConvention.day_count
+        if "day_count" in node:
+            self._check_curve_day_count(node.get("day_count"), day_count)
+        curve = self.curve(node.get("zero_rates"), "zero")
+        if curve is None or len(self.faults) > before:
+            return None
+        if curve.flat and compounding == "simple":
+            self.faults.append(expected("simple rates by tenor or date, as '{3m: 2.0%}'", node.get("zero_rates"),
+                                        "a simple rate belongs to one tenor"))
+        elif curve.flat and day_count not in FLAT_DAY_COUNTS:
+            self.faults.append(expected(f"rates by tenor or date with {day_count}", node.get("zero_rates")))
+        for point in curve.nodes if compounding == "simple" else ():
+            if 1.0 + point.quoted.value * point.time * 366 / 360 <= 0.0:
+                self.faults.append(Fault(point.quoted.place, f"a simple rate as low as this to '{point.label}' leaves "
+                                                             "no discount factor above 0"))
+        return replace(curve, convention=RateConvention(compounding, day_count, self.valuation))
+
+    def _check_curve_day_count(self, node: Node, name: str) -> None:
+        if self.textbook and name != RateConvention.day_count:
+            self.faults.append(expected(f"{RateConvention.day_count}", node, "a textbook market has no dates"))
+        elif name == "Actual/Actual (ICMA)":
+            self.faults.append(expected("a day count of curves", node, f"{name} needs coupon periods"))
 
     def curve_of(self, node: Mapping, form: str) -> Curve | None:
         """Numbers by tenor or date, in order of time."""

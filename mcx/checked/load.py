@@ -12,9 +12,11 @@ from itertools import combinations
 from pathlib import Path
 
 from mcx.checked.contract import Contract
+from mcx.checked.conversions import conversion_faults, conversions, read_conversion, simulated_rates
 from mcx.checked.curves import valuation_of
 from mcx.checked.library import Definitions, clashes, stands_for_shipped
 from mcx.checked.market import Market
+from mcx.checked.payoff import BOND, MULTIPLES
 from mcx.checked.read_contract import asset_names, read_contract
 from mcx.checked.read_market import read_market
 from mcx.checked.read_payoff import read_payoff
@@ -152,9 +154,16 @@ def _with_origin(contract: Contract, definition: Document) -> Contract:
 
 def _with_assumptions(contract: Contract, market: Market) -> Contract:
     """The contract with what is assumed because the market does not say it."""
-    if contract.units is None or contract.currency in market.funding:
-        return contract
-    return replace(contract, assumptions=(*contract.assumptions, NO_FUNDING))
+    conversion, said = conversions(contract.conversion, contract.currency, contract.assets, market)
+    if contract.units is not None and contract.currency not in market.funding:
+        said = (*said, NO_FUNDING)
+    return replace(contract, conversion=conversion, assumptions=(*contract.assumptions, *said))
+
+
+def conversions_known(pair: Pair) -> list[Fault]:
+    """Every asset in another currency counts in a stated way, and the market has what that needs."""
+    return conversion_faults(pair.title, pair.currency, pair.assets, pair.market, pair.contract_body,
+                             bool(pair.stated("fx")) and not pair.market.fx)
 
 
 def _place(body: Mapping, key: str) -> Place:
@@ -185,30 +194,33 @@ def rates_known(pair: Pair) -> list[Fault]:
 
 
 def funding_stated(pair: Pair) -> list[Fault]:
-    """A note's funding spread is stated, be it nil."""
+    """A note's funding spread is stated, be it nil: of what pays multiples of a notional, or has a bond in it."""
     currency, funding = pair.currency, pair.stated("funding")
-    if "notional" not in pair.contract_body or not currency or funding is None or currency in funding:
+    if not _is_note(pair) or not currency or funding is None or currency in funding:
         return []
     text = (f"no funding spread for '{currency}', the currency of the note '{pair.title}'; write "
             f"'funding: {{{currency}: 0 bp}}' to value it without the issuer's spread")
     return [Fault(_place(pair.market_body, "funding" if "funding" in pair.market_body else "market"), text)]
 
 
+def _is_note(pair: Pair) -> bool:
+    """Whether the contract's payments are promises of an issuer."""
+    if "notional" in pair.contract_body or pair.contract is None:
+        return "notional" in pair.contract_body
+    payoff = pair.contract.payoff
+    return payoff.pays == MULTIPLES or any(pay.part == BOND for pay in payoff.payments())
+
+
 def assets_known(pair: Pair) -> list[Fault]:
-    """Every asset of the contract is in the market, in the contract's currency."""
+    """Every asset of the contract is in the market."""
     stated = pair.stated("assets")
     if not stated or not pair.assets:
         return []
     faults = []
     for name, node in zip(pair.assets, pair.contract_body.get("assets"), strict=True):
-        asset = pair.market.assets.get(name)
         if name not in stated:
             near = did_you_mean(name, stated) or f"; it has {listed(stated)}"
             faults.append(Fault(node.place, f"the market has no asset '{name}'{near}"))
-        elif asset and asset.currency and pair.currency and asset.currency != pair.currency:
-            text = (f"'{name}' is quoted in {asset.currency}, but '{pair.title}' pays in "
-                    f"{pair.currency}; paying in another currency (quanto) is for a later version")
-            faults.append(Fault(asset.place, text))
     return faults
 
 
@@ -217,15 +229,21 @@ def correlations_known(pair: Pair) -> list[Fault]:
     matrix."""
     pairs = pair.stated("correlation")
     known = [name for name in pair.assets if name in (pair.stated("assets") or ())]
+    known += simulated_rates(read_conversion(pair.contract_body.get("conversion"), pair.assets, []), pair.currency,
+                             pair.market)
     if pairs is None or len(known) < 2:
         return []
     stated = [tuple(part.strip() for part in each.split("/")) for each in pairs]
-    if any(len(names) != 2 or not set(names) <= set(pair.stated("assets")) for names in stated):
+    named = {*pair.stated("assets"), *(pair.stated("fx") or ())}
+    if any(len(names) != 2 or not set(names) <= named for names in stated):
         return []  # a pair that was misspelt is not missing as well
     place = _place(pair.market_body, "correlation" if "correlation" in pair.market_body else "market")
     missing = [f"{a}/{b}" for a, b in combinations(known, 2) if (a, b) not in stated and (b, a) not in stated]
     if missing:
-        return [Fault(place, f"no correlation for {listed(missing)}")]
+        lines = [f"{names}: NUMBER%" for names in missing]
+        line = f"{listed(lines)} under 'correlation'" if "correlation" in pair.market_body else \
+            f"'correlation: {{{', '.join(lines)}}}'"
+        return [Fault(place, f"no correlation for {listed(missing)}; write {line}")]
     quoted = pair.market.correlation | {names[::-1]: one for names, one in pair.market.correlation.items()}
     if len(known) < 3 or any(names not in quoted for names in combinations(known, 2)):
         return []
@@ -243,5 +261,5 @@ def correlations_known(pair: Pair) -> list[Fault]:
 
 
 CROSS_CHECKS: tuple[Callable[[Pair], list[Fault]], ...] = (
-    one_kind_of_time, rates_known, funding_stated, assets_known, correlations_known,
+    one_kind_of_time, rates_known, funding_stated, assets_known, conversions_known, correlations_known,
 )

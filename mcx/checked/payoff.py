@@ -11,6 +11,8 @@ from mcx.checked.formula import Formula
 from mcx.faults import Place
 
 MONEY, MULTIPLES = "money per unit", "multiples of the notional"
+BOND = "bond"  # the part of what an issuer owes in any case
+
 
 @dataclass(frozen=True, slots=True)
 class Term:
@@ -144,3 +146,8 @@ class Payoff:
 
     def term(self, name: str) -> Term | None:
         return next((term for term in self.terms if term.name == name), None)
+
+    def payments(self) -> tuple[Pay, ...]:
+        """Every payment of its events, in file order."""
+        actions = [action for event in self.events for action in (*event.then, *event.otherwise)]
+        return tuple(action for action in actions if isinstance(action, Pay))

@@ -10,9 +10,10 @@ from __future__ import annotations
 import datetime
 from collections.abc import Mapping as MappingOf
 from dataclasses import replace
-from types import MappingProxyType
 
 from mcx.checked.contract import BusinessDays, Contract, DayRef, DayRule, Period, TermValue
+from mcx.checked.conversions import read_conversion
+from mcx.checked.day_count_names import day_count_name
 from mcx.checked.formula import Formula, Name, walk
 from mcx.checked.payoff import MONEY, MULTIPLES, Assign, Pay, Payoff
 from mcx.checked.read_payoff import read_payoff
@@ -35,25 +36,13 @@ from mcx.text.located import Document, Mapping, Node, Scalar, Sequence
 from mcx.text.scalars import date, expected, period, shortened, word
 
 KEYS = ("contract", "currency", "notional", "units", "assets", "start", "day_count", "settlement", "calendar",
-        "payoff", "terms")
+        "payment_calendar", "conversion", "payoff", "terms")
 REQUIRED = ("contract", "currency", "assets", "payoff", "terms")
-CALENDAR_KEYS = ("start", "day_count", "settlement", "calendar")  # not for textbook contracts
-LATER = ("happened", "fixings", "dividends", "quanto", "adjustments", "rounding", "disruption")
+CALENDAR_KEYS = ("start", "day_count", "settlement", "calendar", "payment_calendar")  # not for textbook contracts
+LATER = ("happened", "fixings", "adjustments", "rounding", "disruption")
 LONGEST_LAG = 250  # business days, a year
+OPEN = ("in all", "in any")
 ROLLS = ("following", "modified following", "preceding")
-
-# The names of 2006 ISDA Definitions, section 4.16, each with the one that `dates/day_counts.py` uses.
-DAY_COUNTS: MappingProxyType[str, str] = MappingProxyType({
-    name: names[0]
-    for names in (
-        ("Actual/Actual (ISDA)", "Actual/Actual", "Act/Act (ISDA)", "Act/Act"),
-        ("Actual/365 (Fixed)", "Act/365 (Fixed)", "A/365 (Fixed)", "A/365F"),
-        ("Actual/360", "Act/360", "A/360"),
-        ("30/360", "360/360", "Bond Basis"),
-        ("30E/360", "Eurobond Basis"),
-    )
-    for name in names
-})
 
 
 def read_contract(
@@ -68,8 +57,9 @@ def read_contract(
     assets = asset_names(body.get("assets"), frame)
     start = read(body, "start", _start, frame)
     settlement = read(body, "settlement", _settlement, frame)
-    day_count = read(body, "day_count", _day_count, frame)
-    calendar = _calendar(body.get("calendar"), frame)
+    day_count = read(body, "day_count", day_count_name, frame)
+    calendar, payment_calendar = (_calendar(body, key, frame) for key in ("calendar", "payment_calendar"))
+    conversion = read_conversion(body.get("conversion"), assets, faults)
     payoff = _payoff(body, definitions, assets, faults)
     terms = mapping_of(body.get("terms"), faults, "terms and their values")
     if payoff is None:
@@ -84,8 +74,9 @@ def read_contract(
     return Contract(
         title=title, currency=currency or "", assets=assets, payoff=_begun(payoff, values), terms=values,
         place=body.get("contract").place, notional=size.get("notional"), units=size.get("units"), start=start,
-        day_count=day_count or "", settlement=settlement, calendar=calendar, textbook=textbook,
-        text=document.text, terms_place=(terms or body).place, at_fault=reader.at_fault,
+        day_count=day_count or "", settlement=settlement, calendar=calendar, payment_calendar=payment_calendar,
+        textbook=textbook, conversion=conversion, text=document.text, terms_place=(terms or body).place,
+        at_fault=reader.at_fault,
         framed=not frame and (textbook or (start and settlement and calendar) is not None),
     ), faults + frame
 
@@ -173,23 +164,32 @@ def _settlement(node: Node) -> Period | Fault:
     return Period(*found)
 
 
-def _day_count(node: Node) -> str | Fault:
-    if isinstance(node, Scalar) and node.text in DAY_COUNTS:
-        return DAY_COUNTS[node.text]
-    near = did_you_mean(node.text, DAY_COUNTS) if isinstance(node, Scalar) else ""
-    names = listed(dict.fromkeys(DAY_COUNTS.values()), "or")
-    return expected(f"a day count: {names}", node, near.removeprefix("; "))
-
-
-def _calendar(node: Node | None, faults: list[Fault]) -> BusinessDays | None:
-    mapping = mapping_of(node, faults, "'{holidays: ECB, roll: modified following}'")
-    if mapping is None or not check_keys(mapping, (), ("holidays", "roll"), faults, "the calendar"):
+def _calendar(body: Mapping, key: str, faults: list[Fault]) -> BusinessDays | None:
+    """`{holidays:, roll:}`, with `open:` where several lists are joined and `extra_holidays:` of its own."""
+    before = len(faults)
+    what = f"the {key.replace('_', ' ')}"
+    mapping = mapping_of(body.get(key), faults, "'{holidays: ECB, roll: modified following}'")
+    if mapping is None or not check_keys(mapping, ("open", "extra_holidays"), ("holidays", "roll"), faults, what):
         return None
-    holidays = read(mapping, "holidays", word, faults)
+    node = mapping.get("holidays")
+    nodes = node.items if isinstance(node, Sequence) else (node,)
+    names = tuple(value_of(each, word, faults) for each in nodes)
     roll = one_of(mapping.get("roll"), ROLLS, faults, "a roll convention")
-    if holidays is None or roll is None:
+    extra = [value_of(each, date, faults)
+             for each in items_of(mapping.get("extra_holidays"), faults, "a list of dates, as '[2027-12-24]'")]
+    opened = one_of(mapping.get("open"), OPEN, faults, "when a day is good") if "open" in mapping else None
+    if not nodes:
+        faults.append(expected("the name of a list of holidays, or several", node, "the list is empty"))
+    elif len(nodes) > 1 and "open" not in mapping:
+        faults.append(Fault(node.place, f"{what} names several lists; say when a day is good: 'open: in all' or "
+                                        "'open: in any' of them"))
+    elif len(nodes) == 1 and "open" in mapping:
+        faults.append(Fault(mapping.key("open").place, f"{what} names one list only; leave out 'open'"))
+    if len(nodes) > 1 and "none" in names:
+        faults.append(Fault(nodes[names.index("none")].place, "'none' cannot be joined with lists of holidays"))
+    if len(faults) > before:
         return None
-    return BusinessDays(holidays, roll, mapping.get("holidays").place)
+    return BusinessDays(names, roll, node.place, tuple(each.place for each in nodes), opened == "in any", tuple(extra))
 
 
 def _is_textbook(written: list[DayRef]) -> bool:
@@ -216,6 +216,8 @@ def _unfit_rule(rule: DayRule, textbook: bool) -> str:
     if textbook and rule.every and rule.every.unit not in ("month", "year"):
         return (f"a step of {rule.every.unit}s needs calendar dates; with times write months or years, or "
                 f"'{{count: 52, until: 1y}}'")
+    if rule.end_of_month and (textbook or rule.every is None or rule.every.unit not in ("month", "year")):
+        return "'end_of_month' goes with calendar dates and steps of months or years"
     if not textbook and rule.count is not None:
         return ("equal steps ('count') are for times; with calendar dates write '{from: ..., until: ..., "
                 "every: 3 months}'")

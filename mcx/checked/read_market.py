@@ -1,8 +1,9 @@
 """From a `market:` document to a `Market`: everything observed on the valuation date, each number as it was
 stated.
 
-Curves and single numbers are read in `curves.py`. What needs a contract to be judged (is every asset there,
-does the correlation matrix hold) is checked in `load.py`.
+Curves and single numbers are read in `curves.py`, assets and rates of exchange in
+`read_underlyings.py`. What needs a contract to be judged (is every asset there, does the correlation matrix
+hold) is checked in `load.py`.
 """
 
 from __future__ import annotations
@@ -11,18 +12,18 @@ from collections.abc import Callable, Iterable
 from typing import TypeVar
 
 from mcx.checked.curves import MarketReader, correlation, valuation_of
-from mcx.checked.market import AssetMarket, Curve, Market, Quoted
-from mcx.checked.reading import check_keys, mapping_of, read, text_of, value_of
-from mcx.checked.values import amount, asset_name, currency_code
-from mcx.faults import Fault, did_you_mean
+from mcx.checked.market import Curve, FxMarket, Market, Quoted
+from mcx.checked.read_underlyings import read_asset, read_fx
+from mcx.checked.reading import check_keys, mapping_of, text_of, value_of
+from mcx.checked.values import currency_code
+from mcx.faults import Fault, nearest
 from mcx.text.located import Document, Mapping, Node, Scalar
 from mcx.text.scalars import expected, percent
 
 T = TypeVar("T")
 
-KEYS = ("funding", "correlation", "uncertainty", "source", "as_of")
-LATER = ("fixings", "dividends", "quanto", "adjustments", "fx", "borrow")
-ASSET_LATER = ("dividends", "quanto", "adjustments", "fixings", "borrow", "strikes", "skew")
+KEYS = ("funding", "fx", "correlation", "uncertainty", "source", "as_of")
+LATER = ("fixings", "adjustments", "borrow")
 UNCERTAIN = ("rates", "funding", "spot", "yield", "forwards", "vol", "correlation")
 
 
@@ -35,16 +36,33 @@ def read_market(document: Document) -> tuple[Market, list[Fault]]:
     rates = _by_currency(reader, body.get("rates"), "rates by currency, as '{EUR: 2.1%}'", factors=True)
     funding = _by_currency(reader, body.get("funding"), "funding spreads by currency, as '{EUR: 80 bp}'")
     named = mapping_of(body.get("assets"), faults, "assets by name") or Mapping((), body.place)
-    assets = _each(named, lambda name, node: _asset(reader, name, node))
+    assets = _each(named, lambda name, node: read_asset(reader, name, node))
+    rates_of_exchange = mapping_of(body.get("fx"), faults,
+                                   "rates of exchange, as '{EUR per USD: {spot: ..., vol: ...}}'")
+    fx = _each(rates_of_exchange or Mapping((), body.place), lambda name, node: read_fx(reader, name, node))
     if "assets" in body and not named.entries:
         faults.append(expected("assets by name", body.get("assets"), "there is none"))
+    _check_rates_of_exchange(fx.values(), named, faults)
     market = Market(
         valuation=valuation, rates=rates, funding=funding, assets=assets,
-        correlation=_correlations(reader, body.get("correlation"), named.keys()),
+        correlation=_correlations(reader, body.get("correlation"), (*named.keys(), *fx)),
         uncertainty=_uncertainty(reader, body.get("uncertainty")), place=body.get("market").place,
         source=text_of(body, "source", faults), as_of=text_of(body, "as_of", faults), keys=body.keys(),
+        fx=fx,
     )
     return market, faults
+
+
+def _check_rates_of_exchange(rates: Iterable[FxMarket], assets: Mapping, faults: list[Fault]) -> None:
+    """Each pair of currencies once, whichever way it is quoted; no name that an asset has."""
+    first: dict[frozenset[str], FxMarket] = {}
+    for rate in rates:
+        known = first.setdefault(frozenset(rate.per), rate)
+        if known is not rate:
+            text = f"'{rate.name}' is '{known.name}' the other way round, which stands at {known.place}; keep one"
+            faults.append(Fault(rate.place, text))
+        if rate.name in assets:
+            faults.append(Fault(assets.key(rate.name).place, f"'{rate.name}' is the name of a rate of exchange"))
 
 
 def _each(mapping: Mapping, parse: Callable[[Scalar, Node], T | None]) -> dict[str, T]:
@@ -70,31 +88,6 @@ def _by_currency(
     return _each(mapping, curve)
 
 
-def _asset(reader: MarketReader, name: Scalar, node: Node) -> AssetMarket | None:
-    """Spot, currency, vol, and either a yield or forwards."""
-    faults, what = reader.faults, f"the asset '{name}'"
-    before = len(faults)
-    value_of(name, asset_name, faults)
-    if not isinstance(node, Mapping):
-        faults.append(expected("'{spot: ..., currency: ..., yield: ..., vol: ...}'", node))
-        return None
-    required = ("spot", "vol") if reader.textbook else ("spot", "currency", "vol")
-    check_keys(node, ("currency", "yield", "forwards"), required, faults, what, ASSET_LATER)
-    if "yield" in node and "forwards" in node:
-        faults.append(Fault(node.key("forwards").place, f"{what} has both 'yield' and 'forwards'; keep one"))
-    if not {"yield", "forwards", "dividends"} & set(node.keys()):
-        faults.append(Fault(node.place,
-                            f"'yield' or 'forwards' is missing in {what}; write 'yield: 0%' for none"))
-    curves = {key: reader.curve(node.get(key), form)
-              for key, form in (("vol", "vol"), ("yield", "zero"), ("forwards", "forward")) if key in node}
-    spot = reader.quoted(node.get("spot"), amount) if "spot" in node else None
-    currency = read(node, "currency", currency_code, faults) or ""
-    if len(faults) > before:
-        return None
-    return AssetMarket(name.text, spot, currency, curves["vol"], name.place, curves.get("yield"),
-                       curves.get("forwards"))
-
-
 def _correlations(
     reader: MarketReader, node: Node | None, assets: Iterable[str]
 ) -> dict[tuple[str, str], Quoted]:
@@ -110,7 +103,7 @@ def _correlations(
             continue
         unknown = [name for name in names if name not in assets]
         for name in unknown:
-            faults.append(Fault(key.place, f"'{name}' is no asset of the market{did_you_mean(name, assets)}"))
+            faults.append(Fault(key.place, f"'{name}' is no asset of the market{_pair_meant(names, assets)}"))
         if names[0] == names[1] and not unknown:
             faults.append(expected("two different assets", key))
         elif names in found or names[::-1] in found:
@@ -119,6 +112,15 @@ def _correlations(
         elif quoted is not None:
             found[names] = quoted
     return found
+
+
+def _pair_meant(names: tuple[str, ...], assets: Iterable[str]) -> str:
+    """"; did you mean 'harbour/lantern'?" where each name is an asset or near one, else the empty string."""
+    meant: list[str] = []
+    for name, other in zip(names, names[::-1], strict=True):
+        others = (each for each in assets if each not in (other, *meant))
+        meant.append(name if name in assets else nearest(name, others))
+    return f"; did you mean '{'/'.join(meant)}'?" if all(meant) else ""
 
 
 def _uncertainty(reader: MarketReader, node: Node | None) -> dict[str, Quoted]:

@@ -166,14 +166,15 @@ class TermReader:
                                      f"{what} has both 'every' and 'count'; keep one"))
             return None
         needed = ("until", "count" if "count" in node else "every")
-        sound = check_keys(node, ("from",), needed, self.faults, what)
+        sound = check_keys(node, ("from", "end_of_month"), needed, self.faults, what)
         start, until = (self._day(node.get(key)) if key in node else None for key in ("from", "until"))
         count = self._count(node.get("count")) if "count" in node else None
         every = self._every(node.get("every")) if "every" in node else None
+        month_end = "end_of_month" in node and value_of(node.get("end_of_month"), flag, self.faults) is True
         whole = sound and until is not None and ("from" not in node or start is not None)
         if not whole or (count is None and every is None):
             return None
-        return DayRule(node.place, until, start, every, count)
+        return DayRule(node.place, until, start, every, count, month_end)
 
     def _count(self, node: Node) -> int | None:
         value = value_of(node, number, self.faults)

@@ -12,11 +12,11 @@ import math
 from dataclasses import replace
 
 from mcx.checked.contract import Contract, DayRef, Figures, Stretch, place_of
-from mcx.checked.payoff import At, Continuous, Event, Pay, Running
+from mcx.checked.payoff import At, Continuous, Event, Pay, Payoff, Running
 from mcx.checked.term_values import DATED_TYPES, NUMERIC
-from mcx.dates.business_days import GoodDays, NotCovered, good_days
+from mcx.dates.business_days import NotCovered, good_days
 from mcx.dates.dated_contract import Day, DatedContract, DatedEvent, Moment, Occasion, Update, Watch
-from mcx.dates.day_counts import YEAR_FRACTIONS
+from mcx.dates.day_counts import ICMA, actual_365_fixed, year_fraction
 from mcx.dates.readable import readings
 from mcx.dates.rules import TermDays, part_of
 from mcx.faults import Fault, Place
@@ -34,18 +34,31 @@ def date_contract(
     dates that can be read in it.
     """
     good, faults = good_days(contract.calendar) if contract.calendar else (None, [])
+    paying, more = good_days(contract.payment_calendar) if contract.payment_calendar else (good, [])
+    faults += more
     if faults or not (contract.framed or contract.textbook):
         return None, faults
     base = None if contract.textbook else valuation or contract.start.date
-    terms = TermDays(contract, base, good)
+    terms = TermDays(contract, base, good, paying, _payment_terms(contract.payoff))
     dated_terms = [term.name for term in contract.payoff.terms if term.type in DATED_TYPES]
     found = {name: terms.of_term(name) for name in dated_terms if name in contract.terms}
     schedules = {name: days for name, days in found.items() if days}
     unread = frozenset(name for name in dated_terms if name in contract.at_fault or found.get(name) == ())
     start = Day(0.0) if contract.textbook else terms.day(contract.start.date)
-    dated, faults = _Dating(contract, valuation, schedules, unread, start, terms, good).dated()
+    dated, faults = _Dating(contract, valuation, schedules, unread, start, terms).dated()
     faults += terms.faults + _wrong_lengths(contract, schedules)
     return (None if faults or contract.at_fault else dated), sorted(set(faults))
+
+
+def _payment_terms(payoff: Payoff) -> frozenset[str]:
+    """The date terms that say when something is paid and nothing else."""
+    pays = {action.due for event in payoff.events for action in (*event.then, *event.otherwise)
+            if isinstance(action, Pay)}
+    watches = [running.at for running in payoff.running if isinstance(running.at, Continuous)]
+    looked = {event.at.name for event in payoff.events} | {end.name for at in watches for end in (at.start, at.end)}
+    looked |= {running.at.name for running in payoff.running if isinstance(running.at, At)}
+    looked |= {name for event in payoff.events for name in (event.since, event.until)}
+    return frozenset(pays - looked)
 
 
 def _wrong_lengths(contract: Contract, schedules: dict[str, tuple[Day, ...]]) -> list[Fault]:
@@ -80,13 +93,13 @@ class _Dating:
     """One contract on its way to a dated one; collects faults as it goes."""
 
     def __init__(self, contract: Contract, valuation: datetime.date | None,
-                 schedules: dict[str, tuple[Day, ...]], unread: frozenset[str], start: Day, terms: TermDays,
-                 good: GoodDays | None):
+                 schedules: dict[str, tuple[Day, ...]], unread: frozenset[str], start: Day, terms: TermDays):
         self.contract, self.payoff, self.valuation = contract, contract.payoff, valuation
-        self.schedules, self.unread, self.start, self.terms, self.good = schedules, unread, start, terms, good
+        self.schedules, self.unread, self.start, self.terms = schedules, unread, start, terms
+        self.good, self.paying = terms.observing, terms.paying
         self.positions = _positions(contract, schedules)
         self.faults: list[Fault] = []
-        self.assumptions: list[str] = []
+        self.assumptions: list[str] = list(terms.notes)
         self.updates: dict[Day, list[Update]] = {}
         self.events: dict[Day, list[DatedEvent]] = {}
         self.watches: list[Watch] = []
@@ -109,7 +122,7 @@ class _Dating:
             contract=self.contract, valuation=self.valuation, start=self.start, schedules=self.schedules,
             moments=tuple(Moment(day, tuple(self.updates.get(day, ())), tuple(self.events.get(day, ())))
                           for day in days),
-            watches=tuple(self.watches), calendar_version=self.good.version if self.good else "",
+            watches=tuple(self.watches), calendar_version=self._calendar_version(),
             assumptions=(*self.contract.assumptions, *dict.fromkeys(self.assumptions)))
         live, faults = readings(dated)
         faults += self.faults
@@ -125,6 +138,13 @@ class _Dating:
         fault = Fault(place, text)
         if fault not in self.faults:
             self.faults.append(fault)
+
+    def _calendar_version(self) -> str:
+        """The lists of holidays that the dates depend on, with the version of the package."""
+        found = [self.good.version] if self.good and self.good.version else []
+        if self.contract.payment_calendar and self.paying.version:
+            found.append(f"{self.paying.version} for payments")
+        return "; ".join(found)
 
     def _refuse_dates_before_start(self) -> None:
         for name, days in self.schedules.items():
@@ -218,16 +238,32 @@ class _Dating:
                 self.past.setdefault(at.name, set()).add(k)
             found.append(Occasion(
                 day=day, schedule="" if single else at.name, nth=k + 1, n_dates=len(days),
-                period=self._fraction(days[k - 1] if k else self.start, day),
+                period=self._fraction(at.name, days[k - 1] if k else self.start, day, k, k == len(days) - 1),
                 years=day.time - self.start.time if self.contract.textbook else _years(self.start, day),
                 dates=self.positions.get(day, {}), earlier=found[-1].day if found else None))
         return found
 
-    def _fraction(self, before: Day, day: Day) -> float:
+    def _fraction(self, name: str, before: Day, day: Day, number: int, final: bool) -> float:
+        """The year fraction of the period that ends on `day`, the `number`-th date of a term, from 0; nan where it
+        is not known."""
         if self.contract.textbook:
             return day.time - before.time
-        rule = YEAR_FRACTIONS.get(self.contract.day_count)
-        return rule(before.date, day.date) if rule else math.nan
+        if self.contract.day_count == ICMA:
+            return self._regular_fraction(name, number)
+        if not self.contract.day_count:
+            return math.nan
+        return year_fraction(self.contract.day_count, before.date, day.date, final=final)
+
+    def _regular_fraction(self, name: str, number: int) -> float:
+        """By Actual/Actual (ICMA) periods are measured between the dates of the rule before they roll: a regular one
+        is always the same part of a year, the first may be short or long."""
+        found = self.terms.regular(name)
+        if found is None:
+            return math.nan
+        regular, skipped = found
+        if number:
+            return regular.months / 12
+        return year_fraction(ICMA, self.contract.start.date, regular.step(skipped), regular=regular)
 
     def _due(self, pay: Pay, occasion: Occasion) -> Day:
         """When an amount is paid."""
@@ -247,6 +283,8 @@ class _Dating:
         if position >= len(self.schedules[pay.due]):  # a list that is too short is the fault already
             return day
         due = self.schedules[pay.due][position]
+        if self.paying is not None:
+            due = self._rolled_payment(due, pay)
         if due.time < day.time:
             self._fault(place_of(self.contract.terms[pay.due], position),
                         f"the payment of what is observed on {day} falls due before, on {due}")
@@ -256,9 +294,18 @@ class _Dating:
         if self.contract.settlement is None:
             return day
         try:
-            return self.terms.day(self.good.add(day.date, self.contract.settlement.count))
+            return self.terms.day(self.paying.add(day.date, self.contract.settlement.count))
         except NotCovered as beyond:
-            self._fault(self.contract.calendar.place, f"the payment of {day}: {beyond}")
+            self._fault((self.contract.payment_calendar or self.contract.calendar).place,
+                        f"the payment of {day}: {beyond}")
+            return day
+
+    def _rolled_payment(self, day: Day, pay: Pay) -> Day:
+        """A payment day that a term gives, good in the payment calendar."""
+        try:
+            return self.terms.day(self.paying.rolled(day.date))
+        except NotCovered as beyond:
+            self._fault(self.contract.terms[pay.due].place, str(beyond))
             return day
 
 
@@ -277,4 +324,4 @@ def _only(dated: DatedContract, live: frozenset[str]) -> DatedContract:
 
 def _years(start: Day, day: Day) -> float:
     """Years between two dates, Actual/365 (Fixed)."""
-    return YEAR_FRACTIONS["Actual/365 (Fixed)"](start.date, day.date)
+    return actual_365_fixed(start.date, day.date)

@@ -31,6 +31,7 @@ from mcx.checked.formula import (
 )
 from mcx.checked.payoff import Action, Assign, At, End, Event, Pay, Running
 from mcx.dates.dated_contract import Day, DatedContract, DatedEvent, Occasion
+from mcx.dates.day_counts import ICMA
 from mcx.faults import Fault, Place
 
 KNOWN_OF_DATE = ("nth", "n_dates", "years", "period")
@@ -269,9 +270,15 @@ class _Walk:
             known = getattr(self.occasion, name, math.nan)
             if not math.isnan(known):
                 return known
-            self.owner.wrong.setdefault(name,
-                                        Fault(place, f"'{name}' is not known here: it belongs to a date"))
+            self.owner.wrong.setdefault(name, self._not_known(name, place))
         return None
+
+    def _not_known(self, name: str, place: Place) -> Fault:
+        stated = self.contract.terms.get(self.occasion.schedule) if self.occasion else None
+        if name == "period" and self.contract.day_count == ICMA and stated is not None:
+            return Fault(stated.place, f"{ICMA} measures by regular periods; expected a date rule for "
+                                       f"'{self.occasion.schedule}' with steps of months that divide a year")
+        return Fault(place, f"'{name}' is not known here: it belongs to a date")
 
     def _term(self, name: str, place: Place) -> float | None:
         stated = self.contract.terms.get(name)

@@ -14,6 +14,7 @@ from fractions import Fraction
 from mcx.checked.contract import Contract, DayList, DayRef, DayRule, Period, Stretch
 from mcx.dates.business_days import GoodDays, NotCovered
 from mcx.dates.dated_contract import Day
+from mcx.dates.day_counts import Regular, last_of_month
 from mcx.faults import Fault, Place
 
 MOST_DATES = 10_000  # of one rule: fifty years of weekdays are no rule's intention
@@ -34,12 +35,16 @@ class TermDays:
     """The days of every date term of a contract, each worked out once.
 
     `base` is the date from which times are counted, None for a textbook contract; `good` its good business
-    days.
+    days, `paying` those of payments, by which the dates of the terms in `payments` roll. `notes` are sentences about
+    how dates were understood.
     """
 
-    def __init__(self, contract: Contract, base: datetime.date | None, good: GoodDays | None):
+    def __init__(self, contract: Contract, base: datetime.date | None, good: GoodDays | None,
+                 paying: GoodDays | None = None, payments: frozenset[str] = frozenset()):
         self.terms, self.base, self.good = contract.terms, base, good
+        self.observing, self.paying, self.payments = good, paying or good, payments
         self.faults: list[Fault] = []
+        self.notes: list[str] = []
         self._found: dict[str, tuple[Day, ...]] = {}  # no days: being worked out, or faulty
         self._busy: set[str] = set()
 
@@ -50,12 +55,14 @@ class TermDays:
         if name not in self._found:
             self._found[name] = ()
             self._busy.add(name)
+            before, self.good = self.good, self.paying if name in self.payments else self.observing
             try:
                 self._found[name] = self._days(self.terms[name])
             except WrongDates as wrong:
                 self.faults += [wrong.fault] if wrong.fault else []
             except NotCovered as beyond:
                 self.faults.append(Fault(self.terms[name].place, str(beyond)))
+            self.good = before
             self._busy.discard(name)
         return self._found[name]
 
@@ -66,6 +73,21 @@ class TermDays:
         if ref.time is not None:
             return Day(ref.time)
         return self.day(self.good.rolled(ref.date))
+
+    def regular(self, name: str) -> tuple[Regular, int] | None:
+        """The regular periods of a rule with steps of months that divide a year, and how many of them lie between
+        `Regular.date` and the term's first date; None for any other term."""
+        value = self.terms.get(name)
+        match value:
+            case DayList(days=(DayRef(term=term, part=part),)) if term:
+                found = self.regular(term)
+                if found is None or part in ("first", "last"):
+                    return None
+                return found[0], found[1] + (part == "but_first")
+            case DayRule(start=DayRef() as start, every=Period(unit="month" | "year") as every):
+                months = every.count * MONTHS[every.unit]
+                return (Regular(self._unrolled(start), months, value.end_of_month), 0) if 12 % months == 0 else None
+        return None
 
     def day(self, date: datetime.date) -> Day:
         """A calendar date with its time, Actual/365 (Fixed)."""
@@ -119,6 +141,7 @@ class TermDays:
         until = self._unrolled(rule.until)
         if until < start:
             raise WrongDates(rule.place, f"the rule ends on {until}, before it begins on {start}")
+        self._check_month_end(rule, start)
         dates = self._business_steps if rule.every.unit == "business day" else self._steps
         return (self.day(date) for date in dates(rule, start, until))
 
@@ -128,7 +151,7 @@ class TermDays:
     def _steps(self, rule: DayRule, start: datetime.date, until: datetime.date) -> list[datetime.date]:
         """Steps from the start, each rolled, the last on `until` as written or as rolled."""
         dates: list[datetime.date] = []
-        for step in _stepped(start, rule.every):
+        for step in _stepped(start, rule.every, rule.end_of_month):
             rolled = self.good.rolled(step)
             dates.append(rolled)
             if until in (step, rolled):
@@ -137,6 +160,16 @@ class TermDays:
                 raise _misses(rule, dates, until)
             _check_count(dates, rule)
         raise _misses(rule, dates, until)
+
+    def _check_month_end(self, rule: DayRule, start: datetime.date) -> None:
+        """What 'end_of_month' asks of a rule, and a word where it was left out but may have been meant."""
+        last = last_of_month(start)
+        if rule.end_of_month and start != last and self.good.rolled(start) != self.good.back(last):
+            raise WrongDates(rule.start.place, f"'end_of_month' needs a rule from the last day of a month, not {start}")
+        if not rule.end_of_month and rule.every.unit in MONTHS and start == last and start.day < 31:
+            note = (f"dates from {start} every {rule.every.count} {rule.every.unit}s keep to day {start.day} of their "
+                    "months; 'end_of_month: true' would take the last days")
+            self.notes += [note] if note not in self.notes else []
 
     def _business_steps(self, rule: DayRule, start: datetime.date,
                         until: datetime.date) -> list[datetime.date]:
@@ -182,15 +215,16 @@ def _meant(day: Day) -> Fraction:
     return Fraction(day.time).limit_denominator(10**12)
 
 
-def _stepped(start: datetime.date, every: Period) -> Iterator[datetime.date]:
+def _stepped(start: datetime.date, every: Period, month_end: bool) -> Iterator[datetime.date]:
     """The start, and each date a whole number of steps after it; the 31st becomes a shorter month's last
-    day."""
+    day, with `month_end` every date its month's."""
     from dateutil.relativedelta import relativedelta
 
     for k in range(MOST_DATES + 1):
         try:
             if every.unit in MONTHS:
-                yield start + relativedelta(months=k * every.count * MONTHS[every.unit])
+                step = start + relativedelta(months=k * every.count * MONTHS[every.unit])
+                yield last_of_month(step) if month_end else step
             else:
                 yield start + datetime.timedelta(days=k * every.count * DAYS[every.unit])
         except (OverflowError, ValueError) as error:

@@ -5,21 +5,28 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
+import numpy as np
+
 from mcx.checked.contract import Contract
 from mcx.checked.market import Market
-from mcx.estimators.differentiate import Differentiator, without_first_levels
+from mcx.estimators.batches import Sampling
+from mcx.estimators.derivative_tape import DerivativeTape, derivative_tape, without_first_levels
+from mcx.estimators.differentiate import Differentiator
+from mcx.estimators.proxy import with_proxy
 from mcx.estimators.ready import Ready
 from mcx.faults import Refusal
 from mcx.leaves.market_map import MarketMap
+from mcx.machine.run import values_by_path
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Instruction, Leaf, LeafKind, Tape
-from mcx.tape.registers import uniform_values
+from mcx.tape.registers import lower, uniform_values
 from mcx.tape.smooth import Jump, jumps, payments
 
 PATHWISE, LIKELIHOOD, MIXED = "pathwise", "likelihood ratio", "mixed"
 GAMMAS = {PATHWISE: "likelihood ratio of the pathwise delta", LIKELIHOOD: "second-order likelihood ratio",
           MIXED: "mixed: likelihood ratio of the pathwise delta, second-order where payments jump"}
+ESCROWS = (LeafKind.ESCROW, LeafKind.MEAN_ESCROW)
 COMPARED = (Op.LT, Op.LE, Op.EQ, Op.NE)
 SINGULAR = 1e-14  # an own variance below this share of the whole
 MOST_DRAWS = 64  # where every payment is smooth; the variance of a likelihood ratio grows with the steps
@@ -30,8 +37,12 @@ class Method:
     """A valid estimator. `refusals`: kinds of numbers, and 'gamma', for which it is not, with the reason."""
 
     name: str
-    engine: Differentiator
+    made: DerivativeTape
+    contract: Contract
     refusals: dict[str, str]
+
+    def on(self, market: Market) -> Differentiator:
+        return Differentiator.on(self.made, market, self.contract)
 
     @property
     def gamma(self) -> str:
@@ -54,9 +65,9 @@ class Methods:
         return next((method.refusals[kind] for method in self.valid if kind in method.refusals), self.reason)
 
 
-def methods(ready: Ready, market: Market, asked: str) -> Methods:
-    """The valid estimators among those asked for ('auto' for all). Raises Refusal where what was asked for is not
-    valid, with the condition that forbids it."""
+def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = None) -> Methods:
+    """The valid estimators among those asked for ('auto' for all); with a pilot, likelihood ratios have a smooth
+    stand-in as a control. Raises Refusal where what was asked for is not valid, with the condition that forbids it."""
     contract, unrolled = ready.dated.contract, ready.unrolled
     price = unrolled.tape.outputs[0]
     tape = without_first_levels(drop_dead_code(replace(unrolled.tape, outputs=(price,), sums=())))
@@ -67,22 +78,34 @@ def methods(ready: Ready, market: Market, asked: str) -> Methods:
     jumping = [payment for payment in paid if found[payment]]
     smooth = [payment for payment in paid if not found[payment]]
     places = tuple({(jump.kind, jump.place): jump for payment in jumping for jump in found[payment]}.values())
-    still = without_own_randomness(dict(zip(tape.leaves, values, strict=True)), contract)
+    leaf_values = dict(zip(tape.leaves, values, strict=True))
+    still = without_own_randomness(leaf_values, contract)
+
+    def by_path(with_basis: Tape) -> np.ndarray:
+        return values_by_path(lower(with_basis, values), seed=pilot.seed, paths=pilot.paths, stream=pilot.stream,
+                              threads=pilot.threads)
 
     def method(name: str, pathwise: list[int], likelihood: list[int]) -> Method:
-        engine = Differentiator.of(tape, unrolled.grid, contract, known, pathwise=pathwise, likelihood=likelihood,
-                                   second=not still)
+        own, proxy = tape, None
+        if likelihood and pilot and not still:
+            logs = {leaf.asset: value for leaf, value in leaf_values.items() if leaf.kind is LeafKind.LOG_SPOT}
+            own, proxy = with_proxy(tape, likelihood, logs, by_path)
+        made = derivative_tape(own, unrolled.grid, len(contract.assets), uniform_values(own, values), pathwise=pathwise,
+                               likelihood=likelihood, second=not still, proxy=proxy)
         refusals = {}
         if likelihood and (reason := read_today(tape, known)):
             refusals["spot"] = reason
-        if reason := still or second_order_trouble(tape, engine):
+        if likelihood and (reason := dividends_compared(tape, known)):
+            blended = any(market.assets[name].blend for name in contract.assets)
+            refusals |= {kind: reason for kind in ("rate", "yield", *(("spot",) if blended else ()))}
+        if reason := still or second_order_trouble(tape, made):
             refusals["gamma"] = reason
-        return Method(name, engine, refusals)
+        return Method(name, made, contract, refusals)
 
     reason = f"the payoff jumps, and {still}" if still else ""
     if asked == "pathwise" and jumping:
         raise Refusal(f"'{contract.title}': no pathwise estimate, since the payoff jumps at {_listed(places)}; such an "
-                      f"estimate would miss the jump and show a small error")
+                      f"estimate would miss that and show a small error")
     if asked in ("likelihood", "mixed") and still and (jumping or asked == "likelihood"):
         raise Refusal(f"'{contract.title}': no likelihood ratio, since {still}")
     valid = []
@@ -113,8 +136,8 @@ def without_own_randomness(values: dict[Leaf, float], contract: Contract) -> str
 
 
 def read_today(tape: Tape, known: Sequence[float | None]) -> str:
-    """Why a likelihood ratio by a spot would miss something: today's level is compared with one that is drawn, and moves
-    while that is held; '' where it is not."""
+    """Why a likelihood ratio by a spot would miss something: today's level is compared with one that is drawn, and
+    moves while that is held; '' where it is not."""
     today: set[int] = set()
     for number, step in enumerate(tape.instructions):
         if _is_today(step) or any(k in today for k in step.operands):
@@ -124,13 +147,27 @@ def read_today(tape: Tape, known: Sequence[float | None]) -> str:
     return ""
 
 
-def second_order_trouble(tape: Tape, engine: Differentiator) -> str:
+def dividends_compared(tape: Tape, known: Sequence[float | None]) -> str:
+    """Why a likelihood ratio by a rate would miss something: cash dividends still to come are part of a level that is
+    compared, and their value moves while the draws are held; '' where they are not."""
+    moved: set[int] = set()
+    for number, step in enumerate(tape.instructions):
+        escrow = step.op is Op.LEAF and step.payload.kind in ESCROWS and known[number] != 0.0
+        if escrow or any(k in moved for k in step.operands):
+            moved.add(number)
+        if step.op in COMPARED and any(k in moved for k in step.operands) and known[number] is None:
+            return (f"cash dividends still to come are part of a level that is compared at {step.place}, and a move of "
+                    f"rates moves their value")
+    return ""
+
+
+def second_order_trouble(tape: Tape, made: DerivativeTape) -> str:
     """Why there is no gamma; '' where there is one."""
     if any(map(_is_today, tape.instructions)):
         return "the payoff reads today's level itself beside later ones; a second derivative through both is not taken"
-    if engine.rough:
-        return ("a payment that jumps reads a continuously watched extreme itself: its second-order score has no finite "
-                "variance")
+    if made.rough:
+        return ("a payment that jumps reads a continuously watched extreme itself: its second-order score has no "
+                "finite variance")
     return ""
 
 

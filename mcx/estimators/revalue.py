@@ -41,8 +41,12 @@ class Revaluer:
         return Revaluer(alone, contract, grouped(seen_from(alone.leaves, later)))
 
     def price(self, market: Market, sampling: Sampling) -> tuple[Batches, Estimate]:
-        """The price in its own unit, by parts of the run and as a whole."""
-        return sampling.sums(lower(self.tape, MarketMap(market, self.contract).values(self.leaves)))
+        """The price in its own unit, by parts of the run and as a whole. Raises KeyboardInterrupt after an
+        interruption: part of a run can be compared with nothing."""
+        found = sampling.sums(lower(self.tape, MarketMap(market, self.contract).values(self.leaves)))
+        if found[1].paths < sampling.paths:
+            raise KeyboardInterrupt
+        return found
 
     def by_parts(self, market: Market, sampling: Sampling) -> np.ndarray:
         """The price by parts of the run, shape (64, 1)."""
@@ -52,7 +56,8 @@ class Revaluer:
 def seen_from(leaves: Iterable[Leaf], later: float) -> list[Leaf]:
     """The leaves with every time that much nearer: what lies between is now, at today's level."""
     return [leaf if leaf.kind is LeafKind.TERM else
-            replace(leaf, start=max(leaf.start - later, 0.0), end=max(leaf.end - later, 0.0)) for leaf in leaves]
+            replace(leaf, start=max(leaf.start - later, 0.0), end=max(leaf.end - later, 0.0),
+                    last=max(leaf.last - later, 0.0)) for leaf in leaves]
 
 
 def step_of(number: Input, size: float) -> float:

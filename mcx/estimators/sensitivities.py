@@ -1,9 +1,11 @@
-"""The sensitivities of a contract in the units of the trade, each a linear combination of derivatives by market numbers.
+"""The sensitivities of a contract in the units of the trade, each a linear combination of derivatives by market
+numbers.
 
 delta per 1 of spot, and for a move of 1 % as percent of the notional; vega and correlation per point (1 %); rho, yield
-and funding per basis point of a zero rate; forwards per 1. Everything but the second delta is in the contract's currency
-for the whole notional or number of units. Where a curve has several nodes there is one line for each and one for all of
-them together, whose value is their sum. Gamma is the change of delta (per 1 of spot) for a move of the spot by 1 %.
+and funding per basis point of a zero rate; forwards per 1. Everything but the second delta is in the contract's
+currency for the whole notional or number of units. Where a curve has several nodes there is one line for each and one
+for all of them together, whose value is their sum. Gamma is the change of delta (per 1 of spot) for a move of the spot
+by 1 %.
 """
 
 from __future__ import annotations

@@ -1,6 +1,7 @@
 """Theta: the same contract, market document and paths, one calendar day on.
 
-The document is kept as it is: levels stand, and every curve is read at the time that is then left. A fixing in between
+The document is kept as it is: levels stand, and every curve is read at the time that is then left; only the ex dates of
+dividends come a day nearer, with the contract's dates. A fixing in between
 happens at today's level, a payment in between is counted in undiscounted. The tape is the contract's own, with all its
 times a day nearer, so nothing is drawn anew.
 """
@@ -8,6 +9,7 @@ times a day nearer, so nothing is drawn anew.
 from __future__ import annotations
 
 from collections.abc import Iterator
+from dataclasses import replace
 
 from mcx.checked.market import Market
 from mcx.dates.dated_contract import DatedContract, Moment
@@ -21,19 +23,29 @@ SAME_TIME = 1e-9
 
 
 def theta(ready: Ready, market: Market, sampling: Sampling, base: Batches) -> Batches:
-    """The price one calendar day on less the price today, in the price's unit, as a single quantity; `base` is the price
-    today on the same paths.
+    """The price one calendar day on less the price today, in the price's unit, as a single quantity; `base` is the
+    price today on the same paths.
 
-    Watched stretches are split where the curves bend on either day, so that the bridges of both are exact; then the price
-    today is taken on that grid as well.
+    Watched stretches are split where the curves bend on either day, so that the bridges of both are exact; then the
+    price today is taken on that grid as well.
     """
     contract, tape = ready.dated.contract, ready.unrolled.tape
     if ready.dated.watches:
         nodes = ready.market.nodes()
-        tape = unroll(ready.dated, nodes=sorted({*nodes, *(node + DAY for node in nodes)})).tape
+        tape = unroll(ready.dated, nodes=sorted({*nodes, *(node + DAY for node in nodes)}),
+                      makeup=ready.market.makeup()).tape
         base, _ = Revaluer.of(tape, contract).price(market, sampling)
-    tomorrow, _ = Revaluer.of(tape, contract, later=DAY).price(market, sampling)
+    tomorrow, _ = Revaluer.of(tape, contract, later=DAY).price(_nearer(market), sampling)
     return Batches(base.paths, tomorrow.means - base.means)
+
+
+def _nearer(market: Market) -> Market:
+    """The market with ex dates a day nearer: they are days of the calendar, as the contract's are."""
+    assets = {name: replace(asset, dividends=tuple(replace(each, time=each.time - DAY) for each in asset.dividends),
+                            blend=asset.blend and replace(asset.blend, cash_until=asset.blend.cash_until - DAY,
+                                                          share_from=asset.blend.share_from - DAY))
+              for name, asset in market.assets.items()}
+    return replace(market, assets=assets)
 
 
 def between(dated: DatedContract) -> Iterator[str]:

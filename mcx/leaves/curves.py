@@ -1,18 +1,20 @@
 """Curves of rates, spreads, yields and forwards, as logs that are linear between their points.
 
-A zero rate r to time t is the log -r t of a discount factor; funding spreads and yields are read by the same rule, and
-forwards are the log of the forward over the spot. Every curve starts at (0, 0), is linear in the log between points,
-and keeps its last slope beyond them: a flat forward rate. Values may be complex: sensitivities are taken by a complex
-step (`jacobian.py`).
+A zero rate r to time t is the log -r t of a discount factor, if it is continuously compounded; funding spreads and
+yields are read by the same rule, and forwards are the log of the forward over the spot. Every curve starts at (0, 0),
+is linear in the log between points, and keeps its last slope beyond them: a flat forward rate. Values may be complex:
+sensitivities are taken by a complex step (`jacobian.py`).
 """
 
 from __future__ import annotations
 
+import datetime
 from dataclasses import dataclass
 
 import numpy as np
 
-from mcx.checked.market import Curve
+from mcx.checked.market import Curve, RateConvention
+from mcx.dates.day_counts import year_fraction
 
 
 @dataclass(frozen=True, slots=True)
@@ -46,22 +48,38 @@ def log_curve(curve: Curve | None, spot: float = 1.0) -> LogCurve:
     if curve is None:
         return NOTHING
     if curve.flat and curve.form == "zero":
-        return LogCurve((0.0,), (0.0,), -curve.nodes[0].quoted.value)
+        return LogCurve((0.0,), (0.0,), _zero_log(curve.convention, 1.0, curve.nodes[0].quoted.value))
     times, logs = [0.0], [0.0]
     for node in curve.nodes:
         if node.time > 0.0:
             times.append(node.time)
-            logs.append(_log(curve.form, node.time, node.quoted.value, spot))
+            logs.append(_log(curve, node.time, node.quoted.value, spot))
     slope = (logs[-1] - logs[-2]) / (times[-1] - times[-2]) if len(times) > 1 else 0.0
     return LogCurve(tuple(times), tuple(logs), slope)
 
 
-def _log(form: str, time: float, value: float, spot: float) -> float:
-    match form:
+def _zero_log(convention: RateConvention, time: float, rate: float) -> float:
+    """The log of the discount factor to a time (Actual/365 Fixed) that a zero rate means by its convention."""
+    years = time
+    if convention.day_count == "Actual/360":
+        years = time * 365 / 360
+    elif convention.day_count != "Actual/365 (Fixed)":
+        day = convention.since + datetime.timedelta(days=round(365 * time))
+        years = year_fraction(convention.day_count, convention.since, day)
+    match convention.compounding:
+        case "annual":
+            return -years * np.log1p(rate)
+        case "simple":
+            return -np.log1p(rate * years)
+    return -rate * years
+
+
+def _log(curve: Curve, time: float, value: float, spot: float) -> float:
+    match curve.form:
         case "zero":
-            return -value * time
+            return _zero_log(curve.convention, time, value)
         case "discount":
             return np.log(value)
         case "forward":
             return np.log(value / spot)
-    raise ValueError(f"no curve of discount factors: {form}")
+    raise ValueError(f"no curve of discount factors: {curve.form}")

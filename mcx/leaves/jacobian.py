@@ -1,9 +1,9 @@
 """The numbers of a market document that a contract hangs on, markets with some of them moved, and the derivative of
 every leaf by each of them.
 
-A number is moved in the coordinate that its sensitivity is quoted in: spots, vols, zero rates, spreads, yields, forwards
-and correlations by a sum, a discount factor by a sum on its zero rate. A spot takes the forwards of its asset along, in
-proportion: what moves is the level, not the growth.
+A number is moved in the coordinate that its sensitivity is quoted in: spots, vols, zero rates, spreads, yields,
+forwards and correlations by a sum, a discount factor by a sum on its zero rate. A spot takes the forwards of its asset
+along, in proportion: what moves is the level, not the growth.
 """
 
 from __future__ import annotations
@@ -107,7 +107,8 @@ def without_derivative(market: Market, contract: Contract) -> dict[Input, str]:
 
 
 def _nodes(kind: str, subject: str, curve: Curve | None) -> list[Input]:
-    return [Input(kind, subject, node.label, node.quoted.value, node.quoted.place) for node in curve.nodes] if curve else []
+    nodes = curve.nodes if curve else ()
+    return [Input(kind, subject, node.label, node.quoted.value, node.quoted.place) for node in nodes]
 
 
 def _asset(asset: AssetMarket, by: Shifts) -> AssetMarket:

@@ -27,7 +27,7 @@ WRITTEN = {
     "level": "in the asset's currency",
     "date": "as 2027-11-16",
     "dates": "as {from: 2027-02-16, until: 2029-11-16, every: 3 months}, or a list",
-    "watch": "a date, dates, or {continuous: [2026-12-01, 2027-12-01]}",
+    "watch": "a date, dates, another term's as observations.last, or {continuous: [2026-12-01, 2027-12-01]}",
     "flag": "true or false",
 }
 
@@ -106,7 +106,8 @@ def _market(assets: Sequence[str]) -> Iterator[str]:
         yield f"  {asset}:"
         yield _line("spot", about="today's level", indent=4)
         yield _line("currency", about="as EUR", indent=4)
-        yield _line("yield", about="as 2.4% or {1y: 2.4%, 3y: 2.2%}", indent=4)
+        yield _line("yield", about="as 2.4% or {1y: 2.4%, 3y: 2.2%}; or 'dividends', 'forwards', 'underlying: total "
+                                   "return'", indent=4)
         yield _line("vol", about="as 18% or {3m: 17%, 1y: 18%, 3y: 19%}", indent=4)
     if len(assets) > 1:
         yield "correlation:"

@@ -10,8 +10,10 @@ from mcx.checked.market import Curve, Market
 from mcx.dates.dated_contract import DatedContract
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.price import Valuation
+from mcx.leaves.market_map import MarketMap
 from mcx.report.results import Martingale
 from mcx.report.settled import Settled, right_sides
+from mcx.report.underlyings import underlyings
 from mcx.tape.ops import Op
 from mcx.tape.program import Tape
 
@@ -63,9 +65,10 @@ def _drift(stages: tuple[Estimate, ...]) -> float:
     return (now.value - before.value) / error if error > 0.0 else 0.0
 
 
-def assumptions(dated: DatedContract, market: Market) -> Iterator[str]:
+def assumptions(dated: DatedContract, market: Market, market_map: MarketMap) -> Iterator[str]:
     """What was taken as given without being said for this contract alone."""
     yield from dated.assumptions
+    yield from underlyings(dated, market_map)
     contract = dated.contract
     if dated.calendar_version:
         yield f"holidays as listed by {dated.calendar_version}"
@@ -78,10 +81,16 @@ def assumptions(dated: DatedContract, market: Market) -> Iterator[str]:
     for name in contract.assets:
         asset = market.assets[name]
         curves.append((f"the vols of {name}", asset.vol, end, "vol"))
-        drifts = ((asset.dividend_yield, "yields", "forward yield"), (asset.forwards, "forwards", "growth"))
+        quanto = asset.quanto if contract.conversion.get(name) == "quanto" else None
+        drifts = ((asset.dividend_yield, "yields", "forward yield"), (asset.forwards, "forwards", "growth"),
+                  (quanto and quanto.fx_vol, "vols of the rate of exchange", "vol"))
         for curve, what, held in drifts:
             if curve is not None:
                 curves.append((f"the {what} of {name}", curve, end, held))
+    curves += [(f"the vols of {rate.name}", rate.vol, end, "vol") for rate in market_map.rates_of_exchange]
+    foreign = {asset.currency for asset in market_map.quotes} - {"", contract.currency}
+    curves += [(f"the rates of {name}", market.rates[name], end, "forward rate")
+               for name in sorted(foreign & set(market.rates))]
     for what, curve, day, held in curves:
         if _ends_before(curve, day.time):
             yield f"{what} end at {curve.nodes[-1].label}; the last {held} is held to {day}"
@@ -95,7 +104,7 @@ def limits(dated: DatedContract) -> Iterator[str]:
     """What the model leaves out, as far as it touches this contract."""
     contract, settled = dated.contract, Settled(dated.contract)
     yield ("risk-neutral lognormal levels with one vol for each asset and tenor: no skew, no stochastic vol, no jumps; "
-           "rates and yields are known in advance")
+           "rates, yields and dividends are known in advance")
     if _turns(settled):
         yield ("under skew the levels where this contract turns have vols of their own: price it with their vol too, "
                "and read the two as a bracket")

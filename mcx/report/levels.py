@@ -103,7 +103,7 @@ class _Reader:
     def _is_asset(self, name: Scalar) -> bool:
         if name.text in self.assets:
             return True
-        near = did_you_mean(name.text, self.assets) or f"; expected one of {', '.join(self.assets)}"
+        near = did_you_mean(name.text, self.assets) or f"; expected {' or '.join(self.assets)}, with levels by date"
         self.faults.append(Fault(name.place, f"'{name.text}' is no asset of the contract{near}"))
         return False
 

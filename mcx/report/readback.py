@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
-from mcx.checked.contract import Figures
+from mcx.checked.contract import BusinessDays, Figures
 from mcx.checked.formula import Number
 from mcx.checked.market import Market
 from mcx.checked.payoff import Assign, Continuous, Pay, Running
@@ -26,13 +26,19 @@ from mcx.report.results import (
     WatchLine,
 )
 from mcx.report.settled import Settled, right_sides
+from mcx.report.underlyings import underlyings
 from mcx.report.wording import Words, days, figure, joined, period
+from mcx.tape.steps import PLAIN
 from mcx.tape.unroll import Unrolled, unroll
 
 HOW = {"average": "the average of {}", "total": "the sum of {}", "product": "the product of {}",
        "lowest": "the lowest {}", "highest": "the highest {}", "latest": "the latest {}",
        "ever": "whether ever {}", "always": "whether always {}"}
+CONVERSIONS = {"quanto": "its level counts as quoted, at a fixed rate of exchange (quanto)",
+               "composite": "its level is converted at the rate of exchange of the same day (composite)"}
 LAWS = {"exact": "the level between two dates is a Brownian bridge in its log, whose extreme has a known law",
+        "nearly exact": "the same law for the level without its cash dividends to come, which enter at their mean over "
+                        "each step between two dates",
         "unread": "nothing depends on it"}
 
 
@@ -40,8 +46,9 @@ def readback(dated: DatedContract, market: Market | None, path: PathResult | Non
     """Everything that the contract says; with a market also what the market says on its dates."""
     contract = dated.contract
     words, settled = Words(dated), Settled(contract)
-    market_map = MarketMap(market, contract) if market else None
-    unrolled = unroll(dated, nodes=market_map.nodes() if market_map else ())
+    market_map = MarketMap.of(market, dated) if market else None
+    nodes, makeup = (market_map.nodes(), market_map.makeup()) if market_map else ((), PLAIN)
+    unrolled = unroll(dated, nodes=nodes, makeup=makeup)
     return Readback(
         contract=contract.title,
         payoff=contract.payoff.name,
@@ -53,7 +60,7 @@ def readback(dated: DatedContract, market: Market | None, path: PathResult | Non
         events=tuple(event_line(event, dated, words, settled) for event in contract.payoff.events),
         watches=tuple(_watches(dated, settled, unrolled)),
         dates=tuple(_dates(dated, words, settled)),
-        assumptions=dated.assumptions,
+        assumptions=(*dated.assumptions, *(underlyings(dated, market_map) if market_map else ())),
         market=tuple(_market(dated, market_map)) if market_map else (),
         path=path,
     )
@@ -68,6 +75,9 @@ def _facts(dated: DatedContract) -> Iterator[Sentence]:
     else:
         yield Sentence("units", f"{figure(contract.units)}; amounts are {contract.currency} for each unit")
     yield Sentence("assets", joined(contract.assets))
+    if contract.conversion:
+        said = (f"{name}: {CONVERSIONS[how]}" for name, how in contract.conversion.items())
+        yield Sentence("conversion", "; ".join(said))
     if contract.start is not None:
         yield Sentence("start", str(dated.start))
     if contract.day_count:
@@ -77,9 +87,18 @@ def _facts(dated: DatedContract) -> Iterator[Sentence]:
     elif contract.textbook:
         yield Sentence("settlement", "paid on the spot")
     if contract.calendar is not None:
-        listed = "weekends only" if contract.calendar.holidays == "none" else contract.calendar.holidays
         version = f" ({dated.calendar_version})" if dated.calendar_version else ""
-        yield Sentence("calendar", f"{listed}, {contract.calendar.roll}{version}")
+        yield Sentence("calendar", _calendar(contract.calendar) + version)
+        yield Sentence("payment calendar", _calendar(contract.payment_calendar) if contract.payment_calendar else
+                       "payments go by the same calendar")
+
+
+def _calendar(stated: BusinessDays) -> str:
+    """Which days are good, and how others roll."""
+    listed = "weekends only" if stated.holidays == ("none",) else joined(stated.holidays)
+    both = f", open in {'any' if stated.in_any else 'all'} of them" if len(stated.holidays) > 1 else ""
+    extra = f", and closed on {joined([str(day) for day in stated.extra])}" if stated.extra else ""
+    return f"{listed}{both}{extra}, {stated.roll}"
 
 
 def _running(running: Running, dated: DatedContract, words: Words, settled: Settled) -> str:

@@ -64,7 +64,7 @@ def price_result(ready: Ready, market: Market, valuation: Valuation) -> PriceRes
         expected_life_standard_error=life.standard_error,
         checks=Checks(martingale, tuple(Stage(e.paths, e.value, e.standard_error) for e in valuation.stages)),
         warnings=tuple(warnings(valuation, ready.unrolled.tape, martingale, met)),
-        assumptions=tuple(dict.fromkeys(assumptions(dated, market))),
+        assumptions=tuple(dict.fromkeys(assumptions(dated, market, ready.market))),
         limits=tuple(limits(dated)),
         cautions=tuple(cautions(dated, bool(conditions or ends))),
         calendar_version=dated.calendar_version,

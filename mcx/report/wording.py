@@ -91,7 +91,8 @@ class Words:
                 part = f".{value.part}" if value.part else ""
                 return f"{days(listed)} ({named}{part})"
             case DayRule(every=every) if every is not None:
-                return f"every {period(every)}: {days(listed)}"
+                ends = ", at the ends of months" if value.end_of_month else ""
+                return f"every {period(every)}{ends}: {days(listed)}"
             case Stretch():
                 return f"all the time from {listed[0]} to {listed[-1]}"
             case DayRef() | DayRule() | DayList():

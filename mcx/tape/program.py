@@ -6,6 +6,7 @@ are named values: the price, each leg, each condition. `Program` is a tape made 
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass, field, replace
 from enum import Enum
 
@@ -18,11 +19,14 @@ from mcx.tape.ops import OPS, Op
 class LeafKind(Enum):
     """What a scalar input of the tape is; the numbers that go with it are in `Leaf`."""
 
-    LOG_SPOT = "log of the spot"  # asset
+    LOG_SPOT = "log of the spot"  # asset; last (0: all of it): without the cash dividends up to then
     DRIFT = "drift of the log over a step"  # asset, start, end
     FACTOR = "covariance factor of a step"  # asset, other (the asset whose normal it multiplies), start, end
-    VARIANCE = "variance of the log over a step"  # asset, start, end
+    VARIANCE = "variance of the log over a step"  # asset, start, end; other (-1: none): of the sum of both logs
     FORWARD = "forward of an asset"  # asset, end
+    JUMP = "log of what a dividend leaves"  # asset, end: its ex date
+    ESCROW = "cash dividends still to come"  # asset, end, last
+    MEAN_ESCROW = "mean of the cash dividends to come over a step"  # asset, start, end, last
     DISCOUNT = "funded discount factor"  # end: when the amount is paid
     TERM = "a numeric term of the contract"  # name, asset (-1: one for all), index (-1: one for all dates)
 
@@ -38,6 +42,7 @@ class Leaf:
     end: float = 0.0
     name: str = ""
     index: int = -1
+    last: float = 0.0  # when the contract reads a level for the last time: cash dividends up to then are escrowed
 
     def __str__(self) -> str:
         shown = [self.kind.name.lower()]
@@ -145,6 +150,13 @@ class Tape:
 
 
 ALONE = np.iinfo(np.int32).max
+
+
+def spot_leaf(leaves: Iterable[Leaf], asset: int) -> Leaf:
+    """The LOG_SPOT leaf of an asset among a tape's, whatever cash dividends it leaves out; the plain one where there is
+    none."""
+    return next((leaf for leaf in leaves if leaf.kind is LeafKind.LOG_SPOT and leaf.asset == asset),
+                Leaf(LeafKind.LOG_SPOT, asset=asset))
 
 
 @dataclass(frozen=True, slots=True)

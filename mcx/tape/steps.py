@@ -8,8 +8,9 @@ of variance to be constant within a step.
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
+import math
+from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass, field
 
 from mcx.faults import Place
 from mcx.tape.builder import Builder
@@ -22,20 +23,39 @@ SAME_TIME = 1e-9  # years: about 0.03 s; dates closer than that are one date, wr
 
 @dataclass(frozen=True, slots=True)
 class Grid:
-    """Times in years from the valuation date, the first 0, and the numbers of the assets that are simulated."""
+    """Times in years from the valuation date, the first 0, and the numbers of what is simulated: assets, then rates of
+    exchange."""
 
     times: tuple[float, ...]
     assets: tuple[int, ...]
 
 
-def expand_levels(tape: Tape, nodes: Sequence[float]) -> tuple[Tape, Grid]:
+@dataclass(frozen=True, slots=True)
+class Makeup:
+    """How levels are made of the lognormal values that are simulated.
+
+    `cash`: assets with cash dividends to come, whose level is the simulated part plus the escrow, and into how many
+    steps a year a watched stretch of theirs is divided at least, since the escrow enters at its mean. `ex`: assets and
+    times at which a dividend takes a share of the level. `rates`: for each asset that is converted at the rate of
+    exchange of the day the number of that rate; rates have numbers after those of the assets.
+    """
+
+    cash: Mapping[int, int] = field(default_factory=dict)
+    ex: frozenset[tuple[int, float]] = frozenset()
+    rates: Mapping[int, int] = field(default_factory=dict)
+
+
+PLAIN = Makeup()
+
+
+def expand_levels(tape: Tape, nodes: Sequence[float], makeup: Makeup = PLAIN) -> tuple[Tape, Grid]:
     """The tape with every LEVEL, LOW and HIGH made of normals and uniforms, without dead code, and its grid.
 
     Normals are numbered step by step, within a step by asset; asset i moves by its drift and by the normals of the
     assets up to itself times the lower-triangular factor of the step's covariance. `nodes` are the times of the
     market's curve points.
     """
-    walk = _Walk(tape, nodes)
+    walk = _Walk(tape, nodes, makeup)
     values: list[int] = []
     for step in tape.instructions:
         if step.op is Op.LEVEL:
@@ -69,15 +89,25 @@ def grid_times(read: Iterable[LevelKey], watched: Iterable[LevelKey], nodes: Ite
     return sorted({*times, *inside})
 
 
+def _between(watched: Iterable[LevelKey], often: Mapping[int, int]) -> set[float]:
+    """Times inside the watched stretches of assets with cash dividends, as many a year as these need."""
+    return {step / count for key in watched if (count := often.get(key.asset))
+            for step in range(math.ceil(key.start * count), math.floor(key.time * count) + 1)}
+
+
 class _Walk:
     """The logs of the assets, moved along the grid as the tape asks for later and later dates."""
 
-    def __init__(self, tape: Tape, nodes: Sequence[float]):
+    def __init__(self, tape: Tape, nodes: Sequence[float], makeup: Makeup):
+        self.makeup = makeup
         levels = [step.payload for step in tape.instructions if step.op is Op.LEVEL]
         extremes = {(step.op, step.payload): None for step in tape.instructions if step.op in (Op.LOW, Op.HIGH)}
-        self.times = grid_times(levels, (key for _, key in extremes), nodes)
+        watched = [key for _, key in extremes]
+        self.times = grid_times(levels, watched, {*nodes, *_between(watched, makeup.cash)})
         self._number = {time: number for number, time in enumerate(self.times)}
-        self.assets = sorted({key.asset for key in levels if self.number(key.time)} | {k.asset for _, k in extremes})
+        moving = {key.asset for key in levels if self.number(key.time)} | {key.asset for _, key in extremes}
+        self.assets = sorted(moving | {makeup.rates[asset] for asset in moving & set(makeup.rates)})
+        self.ex = {(asset, self.number(when)) for asset, when in makeup.ex if self._is_grid_time(when)}
         self.builder = Builder()
         self.uniforms = 0
         self.reached = 0
@@ -97,27 +127,53 @@ class _Walk:
 
     def level(self, key: LevelKey, place: Place | None) -> int:
         number = self.number(key.time)
-        if number == 0:  # the spot itself, to the last digit: its log and back would miss a barrier at the spot
-            return self.builder.leaf(Leaf(LeafKind.FORWARD, asset=key.asset), place)
         self.advance(number)
-        return self.builder.emit(Op.EXP, self.log(key.asset, number), place=place)
+        return self._level(key.asset, number, place)
 
     def is_later_level(self, step: Instruction) -> bool:
-        return step.op is Op.LEVEL and self.number(step.payload.time) > 0
+        """Whether an instruction reads a level that is the exponential of a log."""
+        return (step.op is Op.LEVEL and self.number(step.payload.time) > 0
+                and step.payload.asset not in self.makeup.cash)
 
     def log_level(self, key: LevelKey) -> int:
-        """The log of a level, which is where the level comes from."""
+        """The log that such a level is the exponential of."""
         number = self.number(key.time)
         self.advance(number)
-        return self.log(key.asset, number)
+        return self._converted_log(key.asset, number)
 
     def extreme(self, op: Op, key: LevelKey, place: Place | None) -> int:
         self.advance(self.number(key.time))
-        return self.builder.emit(Op.EXP, self.extremes[op, key], place=place)
+        found = self.extremes[op, key]
+        return found if key.asset in self.makeup.cash else self.builder.emit(Op.EXP, found, place=place)
+
+    def _level(self, asset: int, number: int, place: Place | None = None) -> int:
+        """The level of an asset on a grid date."""
+        if number == 0:  # the spot itself, to the last digit: its log and back would miss a barrier at the spot
+            return self.builder.leaf(Leaf(LeafKind.FORWARD, asset=asset), place)
+        emit = self.builder.emit
+        if asset not in self.makeup.cash:
+            return emit(Op.EXP, self._converted_log(asset, number), place=place)
+        escrow = self.builder.leaf(Leaf(LeafKind.ESCROW, asset, end=self.times[number], last=self.times[-1]))
+        level = emit(Op.ADD, emit(Op.EXP, self.log(asset, number), place=place), escrow, place=place)
+        if asset not in self.makeup.rates:
+            return level
+        rate = emit(Op.EXP, self.log(self.makeup.rates[asset], number), place=place)
+        return emit(Op.MUL, level, rate, place=place)
+
+    def _converted_log(self, asset: int, number: int) -> int:
+        """The log of an asset's level in the contract's currency, without cash dividends to come."""
+        log = self.log(asset, number)
+        if asset not in self.makeup.rates:
+            return log
+        return self.builder.emit(Op.ADD, log, self.log(self.makeup.rates[asset], number))
+
+    def _is_grid_time(self, time: float) -> bool:
+        return time in self._number or any(abs(known - time) <= SAME_TIME for known in self.times)
 
     def log(self, asset: int, number: int) -> int:
         if (asset, number) not in self.logs and number == 0:
-            self.logs[asset, 0] = self.builder.leaf(Leaf(LeafKind.LOG_SPOT, asset=asset))
+            last = self.times[-1] if asset in self.makeup.cash else 0.0
+            self.logs[asset, 0] = self.builder.leaf(Leaf(LeafKind.LOG_SPOT, asset=asset, last=last))
         return self.logs[asset, number]
 
     def advance(self, number: int) -> None:
@@ -129,7 +185,7 @@ class _Walk:
             drawn: dict[tuple[Op, int], int] = {}
             for op, key in self.covering[self.reached]:
                 if (op, key.asset) not in drawn:
-                    drawn[op, key.asset] = self._bridge(op, key.asset)
+                    drawn[op, key.asset] = self._extreme(op, key.asset)
                 self._join(op, key, drawn[op, key.asset])
 
     def _span(self) -> dict[str, float]:
@@ -149,10 +205,26 @@ class _Walk:
         """The extreme of this step, one uniform for all who watch this side of the asset."""
         uniform = self.builder.input(Op.UNIFORM, self.uniforms)
         self.uniforms += 1
-        variance = self.builder.leaf(Leaf(LeafKind.VARIANCE, asset, **self._span()))
-        ends = self.log(asset, self.reached - 1), self.log(asset, self.reached)
+        variance = self.builder.leaf(Leaf(LeafKind.VARIANCE, asset, self.makeup.rates.get(asset, -1), **self._span()))
+        before, after = (self._converted_log(asset, number) for number in (self.reached - 1, self.reached))
+        if (asset, self.reached) in self.ex:  # the bridge ends before the dividend
+            jump = self.builder.leaf(Leaf(LeafKind.JUMP, asset, end=self.times[self.reached]))
+            after = self.builder.emit(Op.SUB, after, jump)
         bridge = Op.BRIDGE_LOW if op is Op.LOW else Op.BRIDGE_HIGH
-        return self.builder.emit(bridge, *ends, variance, uniform)
+        return self.builder.emit(bridge, before, after, variance, uniform)
+
+    def _extreme(self, op: Op, asset: int) -> int:
+        """The extreme of this step, ex dates at its end included: of the log, or of the level itself where cash
+        dividends are still to come; these enter at their mean over the step."""
+        emit, joined = self.builder.emit, Op.MIN if op is Op.LOW else Op.MAX
+        bridge = self._bridge(op, asset)
+        if asset in self.makeup.cash:
+            mean = self.builder.leaf(Leaf(LeafKind.MEAN_ESCROW, asset, **self._span(), last=self.times[-1]))
+            ends = (self._level(asset, number) for number in (self.reached - 1, self.reached))
+            return self.builder.fold(joined, (emit(Op.ADD, emit(Op.EXP, bridge), mean), *ends))
+        if (asset, self.reached) in self.ex:
+            return emit(joined, bridge, self._converted_log(asset, self.reached))
+        return bridge
 
     def _join(self, op: Op, key: LevelKey, drawn: int) -> None:
         before = self.extremes[op, key]

@@ -21,15 +21,19 @@ from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Instruction, Leaf, LeafKind, LevelKey, Output, Tape
 from mcx.tape.running import Observed, Watched
-from mcx.tape.steps import Grid, expand_levels
+from mcx.tape.steps import PLAIN, Grid, Makeup, expand_levels
 from mcx.tape.watching import conflicts
+
+UNKNOWN_SUM = ("an asset with cash dividends that is converted at the rate of the day cannot be watched continuously: "
+               "its law between two dates is not known; name the dates on which it is watched")
 
 
 @dataclass(frozen=True, slots=True)
 class WatchNote:
     """How a continuously watched running value enters: by which extreme of which asset, and by which law.
 
-    `side` is 'low', 'high' or '' where nothing reads it; `law` is 'exact' or 'unread'.
+    `side` is 'low', 'high' or '' where nothing reads it; `law` is 'exact', 'nearly exact' (cash
+    dividends to come enter at their mean over a step) or 'unread'.
     """
 
     name: str
@@ -56,17 +60,32 @@ class Unrolled:
     faults: tuple[Fault, ...] = ()
 
 
-def unroll(dated: DatedContract, *, nodes: Sequence[float]) -> Unrolled:
-    """The tape of a contract; `nodes` are the times of the market's curve points (`MarketMap.nodes`)."""
+def unroll(dated: DatedContract, *, nodes: Sequence[float], makeup: Makeup = PLAIN) -> Unrolled:
+    """The tape of a contract; `nodes` are the times of the market's curve points (`MarketMap.nodes`), `makeup` how
+    levels come about (`MarketMap.makeup`)."""
     walk = _Walk(dated)
     walk.run()
     observed = drop_dead_code(walk.builder.tape(walk.ledger.outputs()))
-    faults = walk.faults or conflicts(observed)
+    faults = walk.faults or conflicts(observed) or _unknown_laws(observed, makeup)
     if faults:
         return Unrolled(Tape((), ()), Tape((), ()), Grid((0.0,), ()), {}, (), tuple(sorted(set(faults))))
     observed, levels = _with_last_levels(observed, dated.contract.assets)
-    tape, grid = expand_levels(observed, nodes)
-    return Unrolled(tape, observed, grid, levels, walk.notes())
+    tape, grid = expand_levels(observed, nodes, makeup)
+    return Unrolled(tape, observed, grid, levels, walk.notes(makeup))
+
+
+def last_read(dated: DatedContract) -> float:
+    """The last time at which the contract reads a level, in years; 0 if it reads none later."""
+    walk = _Walk(dated)
+    walk.run()
+    observed = drop_dead_code(walk.builder.tape(walk.ledger.outputs()))
+    return max((step.payload.time for step in observed.instructions if isinstance(step.payload, LevelKey)), default=0.0)
+
+
+def _unknown_laws(tape: Tape, makeup: Makeup) -> list[Fault]:
+    """Continuous watches of an asset with cash dividends that is converted at the rate of the day."""
+    return sorted({Fault(step.place, UNKNOWN_SUM) for step in tape.instructions
+                   if step.op in (Op.LOW, Op.HIGH) and step.payload.asset in set(makeup.cash) & set(makeup.rates)})
 
 
 def _with_last_levels(tape: Tape, assets: Sequence[str]) -> tuple[Tape, dict[str, tuple[int, float]]]:
@@ -143,10 +162,11 @@ class _Walk:
                 except Unreadable as trouble:
                     self.faults.append(trouble.fault)
 
-    def notes(self) -> tuple[WatchNote, ...]:
+    def notes(self, makeup: Makeup) -> tuple[WatchNote, ...]:
         names = self.dated.contract.assets
         return tuple(
-            WatchNote(name, names[state.side.asset], state.side.level_op.name.lower(), "exact")
+            WatchNote(name, names[state.side.asset], state.side.level_op.name.lower(),
+                      "nearly exact" if state.side.asset in makeup.cash else "exact")
             if state.side
             else WatchNote(name, "", "", "unread")
             for name, state in self.observed.items()

@@ -10,8 +10,10 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from mcx.checked.library import Definitions, shipped_names, shipped_text
+from mcx.checked.library import Definitions, shipped, shipped_names, shipped_text
 from mcx.checked.load import NO_FUNDING, Request, checked_request, load, request
+from mcx.checked.payoff import MULTIPLES
+from mcx.checked.read_payoff import read_payoff
 from mcx.dates.dating import date_contract
 from mcx.faults import InputError
 from mcx.text.documents import parse_documents
@@ -136,17 +138,20 @@ SLIPS = [
      ["a.yaml:2:11: the market has no rates for 'USD'; it has 'EUR'",
       "b.yaml:3:10: no funding spread for 'USD', the currency of the note 'Worst-of put'; write 'funding: "
       "{USD: 0 bp}' to value it without the issuer's spread",
-      *(f"b.yaml:{line}:3: '{name}' is quoted in EUR, but 'Worst-of put' pays in USD; paying in another "
-        "currency (quanto) is for a later version"
+      *(f"b.yaml:{line}:3: '{name}' is quoted in EUR, but 'Worst-of put' pays in USD; write in the contract "
+        f"'conversion: {{{name}: quanto}}' (paid at a fixed rate) or '{{{name}: composite}}' (converted at the rate of "
+        "the day)"
         for line, name in ((5, "harbour"), (6, "quarry"), (7, "orchard")))]),
     (CONTRACT, "[harbour,", "[harbor,",
      ["a.yaml:4:10: the market has no asset 'harbor'; did you mean 'harbour'?"]),
     (MARKET, "funding: {EUR: 0 bp}", "source: screen",
      ["b.yaml:1:9: no funding spread for 'EUR', the currency of the note 'Worst-of put'; write 'funding: "
       "{EUR: 0 bp}' to value it without the issuer's spread"]),
-    (MARKET, ", quarry/orchard: 55%", "", ["b.yaml:8:14: no correlation for 'quarry/orchard'"]),
+    (MARKET, ", quarry/orchard: 55%", "",
+     ["b.yaml:8:14: no correlation for 'quarry/orchard'; write 'quarry/orchard: NUMBER%' under 'correlation'"]),
     (MARKET, "correlation: {harbour/quarry: 60%, harbour/orchard: 65%, quarry/orchard: 55%}\n", "",
-     ["b.yaml:1:9: no correlation for 'harbour/quarry', 'harbour/orchard' and 'quarry/orchard'"]),
+     ["b.yaml:1:9: no correlation for 'harbour/quarry', 'harbour/orchard' and 'quarry/orchard'; write 'correlation: "
+      "{harbour/quarry: NUMBER%, harbour/orchard: NUMBER%, quarry/orchard: NUMBER%}'"]),
 ]
 
 
@@ -195,10 +200,39 @@ def test_what_is_wrong_in_a_document_is_not_missing_beside_it():
 
 
 def test_currency_of_the_asset():
-    """An asset in another currency than the contract's is refused by name until quanto comes."""
+    """An asset in another currency than the contract's needs its conversion, and each conversion its market: rates of
+    that currency, then the rate of exchange's vol and correlation, or the rate itself with all its correlations."""
     market = MARKET.replace("quarry: {spot: 100, currency: EUR", "quarry: {spot: 100, currency: USD")
-    assert made(CONTRACT, market)[1] == ["b.yaml:6:3: 'quarry' is quoted in USD, but 'Worst-of put' pays in "
-                                         "EUR; paying in another currency (quanto) is for a later version"]
+    assert made(CONTRACT, market)[1] == [
+        "b.yaml:6:3: 'quarry' is quoted in USD, but 'Worst-of put' pays in EUR; write in the contract 'conversion: "
+        "{quarry: quanto}' (paid at a fixed rate) or '{quarry: composite}' (converted at the rate of the day)"]
+    quanto = CONTRACT.replace("currency: EUR", "currency: EUR\nconversion: {quarry: quanto}")
+    assert made(quanto, market)[1] == ["b.yaml:6:3: the market has no rates for 'USD', the currency of 'quarry'"]
+    market = market.replace("rates: {", "rates: {USD: 4%, ")
+    assert made(quanto, market)[1] == ["b.yaml:6:3: 'quarry' is paid in EUR at a fixed rate; its market needs 'quanto: "
+                                       "{fx_vol: ..., fx_correlation: ..., fx: EUR per USD}'"]
+    composite = quanto.replace("quanto", "composite")
+    assert made(composite, market)[1] == ["b.yaml:6:3: 'quarry' is converted from USD to EUR, but the market has no "
+                                          "rate of exchange; write 'fx: {EUR per USD: {spot: ..., vol: ...}}'"]
+    market = market.replace("correlation:", "fx: {USD per EUR: {spot: 1.1, vol: 8%}}\ncorrelation:")
+    assert made(composite, market)[1] == ["b.yaml:9:14: no correlation for 'harbour/USD per EUR', 'quarry/USD per EUR' "
+                                          "and 'orchard/USD per EUR'; write 'harbour/USD per EUR: NUMBER%', "
+                                          "'quarry/USD per EUR: NUMBER%' and 'orchard/USD per EUR: NUMBER%' under 'correlation'"]
+    assert made(CONTRACT.replace("currency: EUR", "currency: EUR\nconversion: {harbour: quanto}"), MARKET)[1] == [
+        "a.yaml:3:14: 'harbour' is quoted in EUR, the contract's currency: there is nothing to convert"]
+
+
+def test_a_quanto_that_only_the_market_suggests():
+    """The market's 'quanto' is enough, but then the result says that it was."""
+    market = MARKET.replace("rates: {", "rates: {USD: 4%, ").replace(
+        "quarry: {spot: 100, currency: EUR",
+        "quarry: {spot: 100, quanto: {fx_vol: 9%, fx_correlation: -20%, fx: EUR per USD}, currency: USD")
+    asked, faults = made(CONTRACT, market)
+    assert faults == []
+    assert asked.contracts[0].conversion == {"quarry": "quanto"}
+    assert any("taken to be paid in EUR at a fixed rate" in said for said in asked.contracts[0].assumptions)
+    assert made(CONTRACT, market.replace("EUR per USD", "GBP per USD"))[1] == [
+        "b.yaml:6:31: the quanto of 'quarry' is about GBP per USD; expected 'EUR per USD' or 'USD per EUR'"]
 
 
 def test_correlations_that_cannot_be():
@@ -268,6 +302,27 @@ def test_funding_of_options_is_an_assumption():
     assert asked.contracts[0].assumptions == (NO_FUNDING,)
     asked, _ = made(OPTION, TEXTBOOK.replace("rates", "funding: {EUR: 10 bp}\nrates"))
     assert asked.contracts[0].assumptions == ()
+
+
+def test_funding_of_a_note_is_stated_whatever_its_size_is_called():
+    """A payment of part 'bond' is an issuer's promise, also of a definition that leaves it open what amounts are."""
+    own = ("payoff: own\nterms: {expiry: {type: date}}\nevents:\n  - {at: expiry, pay: 1, part: bond}\n"
+           "  - {at: expiry, pay: spot, part: option}\n")
+    note = OPTION.replace("payoff: european", "payoff: own").replace("side: call, strike: 100, ", "")
+    said = ("b.yaml:1:9: no funding spread for 'EUR', the currency of the note 'Call'; write 'funding: {EUR: 0 bp}' to "
+            "value it without the issuer's spread")
+    assert made(note, TEXTBOOK, own)[1] == [said]
+    funded = TEXTBOOK.replace("rates", "funding: {EUR: 0 bp}\nrates")
+    assert made(note, funded, own)[1] == []
+    assert made(note, TEXTBOOK, own.replace("bond", "option"))[1] == []
+
+
+def test_shipped_notes_take_a_notional():
+    """Every shipped definition with a bond in it says that its amounts are multiples of the notional."""
+    for name in shipped_names():
+        payoff, _ = read_payoff(shipped(name))
+        if any(pay.part == "bond" for pay in payoff.payments()):
+            assert payoff.pays == MULTIPLES, name
 
 
 MOST_WORDS = ["", "-1", "0", "70", "nan", "1e999", "[]", "{}", "[1, 2]", "{a: 1}", "2026-02-30", "9999-12-31",

@@ -97,7 +97,7 @@ def test_a_whole_contract():
     assert (contract.title, contract.currency, contract.size) == ("Harbour and Lantern sampler", "EUR", 1e6)
     assert contract.start.date == date(2026, 11, 16)
     assert contract.settlement == Period(2, "business day")
-    assert (contract.calendar.holidays, contract.calendar.roll) == ("ECB", "modified following")
+    assert (contract.calendar.holidays, contract.calendar.roll) == (("ECB",), "modified following")
     assert str(contract.calendar.place) == "c.yaml:8:22"
     terms = contract.terms
     assert terms["initial"].rows == ((4210.5, 812.4),)
@@ -184,8 +184,8 @@ SLIPS = [
     ("start: 2026-11-16\n", "", "1:1: 'start' is missing in the contract"),
     ("day_count: 30/360\n", "", "1:1: 'day_count' is missing in the contract: 'sampler' pays by 'period'"),
     ("30/360", "30/365",
-     "6:12: expected a day count: 'Actual/Actual (ISDA)', 'Actual/365 (Fixed)', 'Actual/360', '30/360' or "
-     "'30E/360', found '30/365'; did you mean '30/360'?"),
+     "6:12: expected a day count: 'Actual/Actual (ISDA)', 'Actual/Actual (ICMA)', 'Actual/365 (Fixed)', "
+     "'Actual/360', '30/360', '30E/360' or '30E/360 (ISDA)', found '30/365'; did you mean '30/360'?"),
     ("2 business days", "2 days",
      "7:13: expected a number of business days, as '2 business days', found '2 days'"),
     ("2 business days", "9999 business days",

@@ -6,7 +6,7 @@ from datetime import date
 
 import pytest
 
-from mcx.checked.market import Market
+from mcx.checked.market import Market, RateConvention
 from mcx.checked.read_market import read_market
 from mcx.text.documents import parse_documents
 
@@ -83,6 +83,34 @@ def test_no_dates_in_textbook_markets(label: str):
                       "has no dates"]
 
 
+def test_the_convention_of_rates():
+    """Zero rates may be quoted with annual or simple compounding and another day count; without a word they are
+    continuous and Actual/365 (Fixed)."""
+    market, faults = parsed(WHOLE.replace("{1m: 2.0%, 1y: 2.1%, 2029-12-01: 2.35%}",
+                                          "{zero_rates: {1m: 2.0%}, compounding: simple, day_count: Act/360}"))
+    assert faults == []
+    assert market.rates["EUR"].convention == RateConvention("simple", "Actual/360", date(2026, 12, 1))
+    assert parsed(WHOLE)[0].rates["EUR"].convention == RateConvention()
+
+
+@pytest.mark.parametrize(("written", "fault"), [
+    ("{zero_rates: 2%, compounding: simple}",
+     "4:21: expected simple rates by tenor or date, as '{3m: 2.0%}', found '2%'; a simple rate belongs to one tenor"),
+    ("{zero_rates: 2%, compounding: annual, day_count: 30/360}",
+     "4:21: expected rates by tenor or date with 30/360, found '2%'"),
+    ("{zero_rates: 2%}", "4:8: 'compounding' is missing in the curve"),
+    ("{zero_rates: 2%, compounding: monthly}",
+     "4:38: expected a compounding: 'continuous', 'annual' or 'simple', found 'monthly'"),
+    ("{zero_rates: {1y: 2%}, compounding: annual, day_count: Act/Act (ICMA)}",
+     "4:63: expected a day count of curves, found 'Act/Act (ICMA)'; Actual/Actual (ICMA) needs coupon periods"),
+    ("{zero_rates: {3y: -40%}, compounding: simple}",
+     "4:26: a simple rate as low as this to '3y' leaves no discount factor above 0"),
+])
+def test_conventions_that_do_not_fit(written: str, fault: str):
+    """Each has its fault at its place."""
+    assert faults_of("{1m: 2.0%, 1y: 2.1%, 2029-12-01: 2.35%}", written) == [f"m.yaml:{fault}"]
+
+
 SLIPS = [
     # a rate, vol or correlation without its unit
     ("2.1%", "2.1", "4:23: expected a percentage with its unit, found '2.1'; write '2.1%'"),
@@ -137,7 +165,8 @@ SLIPS = [
     ("correlation:", "corelation:",
      "10:1: 'corelation' is not a key of the market; did you mean 'correlation'?"),
     ("harbour/lantern", "harbour/latern",
-     "10:15: 'latern' is no asset of the market; did you mean 'lantern'?"),
+     "10:15: 'latern' is no asset of the market; did you mean 'harbour/lantern'?"),
+    ("harbour/lantern", "harbour/harbor", "10:15: 'harbor' is no asset of the market"),
     ("harbour/lantern", "harbour", "10:15: expected a pair of assets, as 'harbour/lantern', found 'harbour'"),
     ("harbour/lantern", "harbour/harbour", "10:15: expected two different assets, found 'harbour/harbour'"),
     ("65%}", "65%, lantern/harbour: 65%}",
@@ -151,11 +180,58 @@ SLIPS = [
     # later versions
     ("source: closing prices", "fixings: {}",
      "2:1: 'fixings' is a key of a later version and is refused rather than ignored"),
-    ("yield: 2.4%, ", "dividends: [], ",
-     "8:42: 'dividends' is a key of a later version and is refused rather than ignored"),
-    ("yield: 2.4%, ", "yield: 2.4%, quanto: {}, ",
-     "8:55: 'quanto' is a key of a later version and is refused rather than ignored"),
+    # what the level gives up
+    ("yield: 2.4%, ", "dividends: [], ", "8:53: expected dividends by ex date, as '[{ex: 2027-05-03, cash: 4.0}, {ex: "
+                                         "2028-05-02, share: 1.5%}]', found a list; there is none; write 'yield: 0%'"),
+    ("yield: 2.4%, ", "dividends: [{ex: 2027-05-03}], ", "8:54: the dividend has neither 'cash' nor 'share'"),
+    ("yield: 2.4%, ", "dividends: [{ex: 2027-05-03, cash: 4%}], ",
+     "8:77: expected an amount of money, found '4%'; write it without a unit"),
+    ("yield: 2.4%, ", "dividends: [{ex: 2027-05-03, share: 100%}], ",
+     "8:78: expected a share above 0% and below 100%, found '100%'"),
+    ("yield: 2.4%, ", "dividends: [{ex: 2027-05-03, cash: 4}, {ex: 2027-05-03, share: 1%}], ",
+     "8:86: a second dividend on 2027-05-03; one may have both cash and share"),
+    ("forwards: {", "dividends: [{ex: 2027-05-03, cash: 4}], forwards: {",
+     "9:104: the asset 'lantern' has both 'dividends' and 'forwards'; keep one"),
+    ("yield: 2.4%, ", "underlying: total return, yield: 2.4%, ",
+     "8:68: 'yield' counts twice: the asset 'harbour' is a total-return index, whose level keeps its dividends"),
+    ("yield: 2.4%, ", "decrement: 5%, ",
+     "8:42: a decrement is taken from a total-return index; write 'underlying: total return' as well"),
+    ("yield: 2.4%, ", "underlying: total return, decrement: 50, ",
+     "8:79: expected a decrement a year, as '5%' or '50 points', found '50'"),
+    ("yield: 2.4%, ", "yield: 2.4%, dividend_blend: {cash_until: 1y, share_from: 3y}, ",
+     "8:55: a blend is for cash dividends, and the asset 'harbour' has none"),
+    ("yield: 2.4%, ", "dividends: [{ex: 2027-05-03, cash: 4}], dividend_blend: {cash_until: 3y, share_from: 3y}, ",
+     "8:127: expected a date or tenor after 'cash_until', found '3y'"),
+    # rates of exchange
+    ("yield: 2.4%, ", "yield: 2.4%, quanto: {fx_vol: 9%, fx_correlation: -20%}, ",
+     "8:63: 'fx' is missing in the quanto"),
+    ("yield: 2.4%, ", "yield: 2.4%, quanto: {fx_vol: 9%, fx_correlation: -20%, fx: GBP per USD}, ",
+     "8:102: expected a rate of exchange with EUR, the asset's currency, found 'GBP per USD'"),
+    ("source: closing prices", "fx: {EUR per USD: {spot: 0.9, vol: 8%}, USD per EUR: {spot: 1.1, vol: 8%}}",
+     "2:41: 'USD per EUR' is 'EUR per USD' the other way round, which stands at m.yaml:2:6; keep one"),
+    ("source: closing prices", "fx: {EUR/USD: {spot: 1.1, vol: 8%}}",
+     "2:6: expected a rate of exchange as 'EUR per USD': units of the first for one of the second, found 'EUR/USD'"),
 ]
+
+
+def test_what_a_level_gives_up():
+    """Dividends stand in order of time with those of the past; a decrement is a share or points a year; a rate of
+    exchange keeps its direction."""
+    market, faults = parsed(WHOLE.replace("yield: 2.4%, ", "dividends: [{ex: 2028-05-02, share: 1.5%}, {ex: "
+                                          "2026-12-01, cash: 4, share: 1%}], dividend_blend: {cash_until: 2026-06-01, "
+                                          "share_from: 3y}, ")
+                            .replace("forwards: {1y: 805, 2028-12-01: 810}",
+                                     "underlying: total return, decrement: 50 points")
+                            + "fx: {EUR per USD: {spot: 0.9, vol: 8%}}\n")
+    assert faults == []
+    harbour, lantern = market.assets["harbour"], market.assets["lantern"]
+    assert [(one.time, one.label) for one in harbour.dividends] == [(0.0, "2026-12-01"), (518 / 365, "2028-05-02")]
+    assert (harbour.dividends[0].cash.value, harbour.dividends[0].share.value) == (4, 0.01)
+    assert harbour.dividends[1].cash is None
+    assert (harbour.blend.cash_until, harbour.blend.share_from) == (-183 / 365, 1096 / 365)
+    assert (lantern.total_return, lantern.decrement.points, lantern.decrement.quoted.value) == (True, True, 50)
+    assert market.fx_between("USD", "EUR").per == ("EUR", "USD")
+    assert market.fx_between("GBP", "EUR") is None
 
 
 @pytest.mark.parametrize(("old", "new", "expected"), SLIPS, ids=[f"{new}" for _, new, _ in SLIPS])

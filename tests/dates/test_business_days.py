@@ -15,7 +15,7 @@ PLACE = Place("note.yaml", 9, 23)
 
 
 def good(roll: str = "following", name: str = "ECB") -> GoodDays:
-    found, faults = good_days(BusinessDays(name, roll, PLACE))
+    found, faults = good_days(BusinessDays((name,), roll, PLACE, (PLACE,)))
     assert faults == []
     return found
 
@@ -78,11 +78,11 @@ def test_version_names_the_package_and_the_list():
 
 def test_unknown_list_is_a_fault_with_a_near_name():
     """A name that the package does not know is a fault at its place."""
-    found, faults = good_days(BusinessDays("XNYSE", "following", PLACE))
+    found, faults = good_days(BusinessDays(("XNYSE",), "following", PLACE, (PLACE,)))
     assert found is None
     assert [str(fault) for fault in faults] == ["note.yaml:9:23: there are no holidays 'XNYSE'; did you mean "
                                                 "'XNYS'?"]
-    _, faults = good_days(BusinessDays("weekends", "following", PLACE))
+    _, faults = good_days(BusinessDays(("weekends",), "following", PLACE, (PLACE,)))
     assert "expected 'none' (weekends only)" in faults[0].text
 
 

@@ -23,7 +23,7 @@ def days_of(value: TermValue, holidays: str = "none", roll: str = "modified foll
     """The days of a term, as text, or the faults."""
     contract = Contract("test", "EUR", ("harbour",), None, {"days": value, **others}, PLACE,
                         textbook=textbook)
-    good, _ = good_days(BusinessDays(holidays, roll, PLACE))
+    good, _ = good_days(BusinessDays((holidays,), roll, PLACE, (PLACE,)))
     terms = TermDays(contract, None if textbook else date(2026, 12, 1), None if textbook else good)
     days = terms.of_term("days")
     return [str(fault) for fault in terms.faults] or [str(day) for day in days]

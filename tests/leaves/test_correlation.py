@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 import pytest
 from hypothesis import given
@@ -35,6 +37,22 @@ def test_the_factor_gives_the_covariance_back(size: int, rank: int, seed: int):
     factor = lower_factor(covariance)
     assert np.all(np.triu(factor, 1) == 0.0) and np.all(np.isfinite(factor))
     np.testing.assert_allclose(factor @ factor.T, covariance, atol=1e-6 * np.max(covariance))
+
+
+def test_an_asset_that_all_but_follows_another_keeps_what_is_its_own():
+    """At a correlation of 99.999 % two hundred-thousandths of the variance are left, and they are not rounding."""
+    factor = lower_factor(np.array([[0.04, 0.99999 * 0.06], [0.99999 * 0.06, 0.09]]))
+    assert factor[1, 1] == pytest.approx(0.3 * math.sqrt(1.0 - 0.99999**2), rel=1e-9)
+
+
+def test_rounding_is_no_randomness():
+    """What rounding leaves of the variance of an asset that follows another is dropped, with all that it would move."""
+    deviations = np.array([0.17, 0.23, 0.31, 0.4])
+    correlation = np.array([[1.0, 0.1, 0.1, 0.1], [0.1, 1.0, 1.0, 0.5], [0.1, 1.0, 1.0, 0.5], [0.1, 0.5, 0.5, 1.0]])
+    covariance = correlation * np.outer(deviations, deviations)
+    factor = lower_factor(covariance)
+    assert factor[2, 2] == 0.0 and factor[3, 2] == 0.0
+    np.testing.assert_allclose(factor @ factor.T, covariance, rtol=1e-12)
 
 
 def test_perfectly_correlated_assets_share_their_randomness():

@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
+from datetime import date
 
 import pytest
 
-from mcx.checked.market import Curve, Node, Quoted
+from mcx.checked.market import Curve, Node, Quoted, RateConvention
 from mcx.faults import Place
 from mcx.leaves.curves import log_curve
 
@@ -65,3 +67,24 @@ def test_forwards_start_at_the_spot_and_keep_their_last_growth():
     assert 100.0 * line.factor(0.5) == pytest.approx(math.sqrt(100.0 * 102.0))
     assert 100.0 * line.factor(2.0) == pytest.approx(103.0)
     assert 100.0 * line.factor(3.0) == pytest.approx(103.0 * 103.0 / 102.0)
+
+
+@pytest.mark.parametrize(("compounding", "day_count", "time", "rate", "factor"), [
+    ("annual", "Actual/365 (Fixed)", 2.0, 0.05, 1.05**-2),
+    ("annual", "Actual/360", 2.0, 0.05, 1.05 ** (-730 / 360)),
+    ("simple", "Actual/360", 91 / 365, 0.05, 1 / (1 + 0.05 * 91 / 360)),
+    ("simple", "30/360", 90 / 365, 0.05, 1 / (1 + 0.05 * 90 / 360)),  # 2026-12-01 to 2027-03-01
+    ("continuous", "Actual/Actual (ISDA)", 761 / 365, 0.05, math.exp(-0.05 * (31 / 365 + 1 + 365 / 366))),
+    ("continuous", "Actual/365 (Fixed)", 2.0, 0.05, math.exp(-0.1)),
+])
+def test_compounding_and_day_count_of_rates(compounding: str, day_count: str, time: float, rate: float, factor: float):
+    """A zero rate is turned into its discount factor by the convention that it is quoted by; seen from 1 December 2026,
+    761 days later is 31 December 2028."""
+    quoted = replace(curve("zero", {time: rate}), convention=RateConvention(compounding, day_count, date(2026, 12, 1)))
+    assert log_curve(quoted).factor(time) == pytest.approx(factor, rel=1e-14)
+
+
+def test_a_flat_annual_rate():
+    """A flat rate compounds over any time, whole years or not."""
+    flat = replace(curve("zero", {0.0: 0.05}), convention=RateConvention("annual", "Actual/360"))
+    assert log_curve(flat).factor(0.7) == pytest.approx(1.05 ** (-0.7 * 365 / 360), rel=1e-15)

@@ -20,8 +20,9 @@ assets:
   orchard: {spot: 80, currency: EUR, yield: 0%, vol: 24%}
 correlation: {harbour/lantern: 40%, orchard/harbour: -20%, lantern/orchard: 10%}
 """
-CONTRACT = document("basket_option", "[harbour, lantern, orchard]", side="call", strike=1.0,
-                    weights="{harbour: 0.3, lantern: 0.3, orchard: 0.4}", initial="{harbour: 100, lantern: 50, orchard: 80}", expiry="1.6y")
+CONTRACT = document("basket_option", "[harbour, lantern, orchard]", side="call", strike="100%",
+                    weights="{harbour: 0.3, lantern: 0.3, orchard: 0.4}",
+                    initial="{harbour: 100, lantern: 50, orchard: 80}", expiry="1.6y")
 
 
 def ready() -> Ready:
@@ -37,10 +38,12 @@ def test_every_number_is_listed_by_name_and_place():
     case = ready()
     found = inputs(case.market, case.dated.contract)
     assert names(found) == [
-        "spot of harbour", "vol of harbour at 3m", "vol of harbour at 1y", "vol of harbour at 3y", "yield of harbour at 6m",
-        "yield of harbour at 2y", "spot of lantern", "vol of lantern at 1y", "vol of lantern at 2y",
-        "forward of lantern at 1y", "forward of lantern at 2y", "spot of orchard", "vol of orchard", "yield of orchard", "rate of EUR at 6m",
-        "rate of EUR at 2y", "funding of EUR at 1y", "funding of EUR at 3y", "correlation of harbour/lantern",
+        "spot of harbour", "vol of harbour at 3m", "vol of harbour at 1y", "vol of harbour at 3y",
+        "yield of harbour at 6m", "yield of harbour at 2y", "spot of lantern", "vol of lantern at 1y",
+        "vol of lantern at 2y",
+        "forward of lantern at 1y", "forward of lantern at 2y", "spot of orchard", "vol of orchard",
+        "yield of orchard", "rate of EUR at 6m", "rate of EUR at 2y", "funding of EUR at 1y", "funding of EUR at 3y",
+        "correlation of harbour/lantern",
         "correlation of orchard/harbour", "correlation of lantern/orchard"]
     assert len({number.place for number in found}) == len(found)
     line = f"{CONTRACT}---\n{MARKET}".splitlines()[found[1].place.line - 1]
@@ -55,7 +58,8 @@ def test_the_derivative_is_that_of_the_map():
     for column, number in enumerate(inputs(market, contract)):
         step = 1e-5 * (number.value if number.kind in ("spot", "forward") else 1.0)
         up, down = (MarketMap(moved(market, {number: side * step}), contract).values(leaves) for side in (1, -1))
-        np.testing.assert_allclose(found[:, column], (up - down) / (2 * step), rtol=1e-6, atol=1e-8, err_msg=str(number))
+        by_difference = (up - down) / (2 * step)
+        np.testing.assert_allclose(found[:, column], by_difference, rtol=1e-6, atol=1e-8, err_msg=str(number))
         assert np.any(found[:, column])
 
 
@@ -88,8 +92,10 @@ def test_kinks_are_named():
     text = f"{CONTRACT}---\n{MARKET}"
     assert without_derivative(ready().market, ready().dated.contract) == {}
     flat = request_of(text.replace("{1y: 31%, 2y: 27%}", "{1y: 28%, 4y: 14%}"))
-    assert names(tuple(without_derivative(flat.market, flat.contracts[0]))) == ["vol of lantern at 1y", "vol of lantern at 4y"]
-    tied = request_of(text.replace("lantern: 40%", "lantern: 100%").replace("lantern/orchard: 10%", "lantern/orchard: -20%"))
+    kinks = without_derivative(flat.market, flat.contracts[0])
+    assert names(tuple(kinks)) == ["vol of lantern at 1y", "vol of lantern at 4y"]
+    text = text.replace("harbour/lantern: 40%", "harbour/lantern: 100%")
+    tied = request_of(text.replace("lantern/orchard: 10%", "lantern/orchard: -20%"))
     assert len(without_derivative(tied.market, tied.contracts[0])) == 3
 
 

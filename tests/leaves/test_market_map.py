@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -90,5 +91,26 @@ def test_factors_do_not_depend_on_which_of_them_are_asked_for():
 
 
 def test_nodes_are_where_drifts_and_vols_change():
-    """Every point of a rate, yield, forward and vol curve of the contract's assets, once."""
+    """Every point of a rate, yield, forward and vol curve of the contract's assets, once; each has one of its own here,
+    so that none can be left out unseen. Funding moves no asset, nor does the rate of a currency that none has."""
     assert MAP.nodes() == (0.5, 1.0, 1.5, 2.0)
+    north = replace(MARKET.assets["north"], dividend_yield=curve("zero", {0.7: 0.01, 1.4: 0.02}))
+    market = replace(
+        MARKET,
+        rates={"EUR": curve("zero", {0.3: 0.02, 2.5: 0.03}), "USD": curve("zero", {0.9: 0.01, 1.9: 0.02})},
+        funding={"EUR": curve("zero", {0.8: 0.01, 1.8: 0.02})},
+        assets=MARKET.assets | {"north": north, "spare": replace(north, vol=curve("vol", {0.1: 0.2, 0.2: 0.2}))},
+    )
+    assert MarketMap(market, CONTRACT).nodes() == (0.3, 0.5, 0.7, 1.0, 1.4, 1.5, 2.0, 2.5)
+
+
+def test_an_asset_grows_at_the_rate_of_its_own_currency():
+    """What is paid is discounted in the contract's currency; the forward of an asset quoted in another one is its own
+    market's, and so are the nodes of its drift."""
+    north = replace(MARKET.assets["north"], currency="USD")
+    market = replace(MARKET, rates=MARKET.rates | {"USD": curve("zero", {0.9: 0.05})},
+                     assets=MARKET.assets | {"north": north})
+    abroad = MarketMap(market, CONTRACT)
+    assert abroad.forward("north", 1.0) == pytest.approx(100.0 * math.exp(0.05 - 0.015))
+    assert abroad.discount(1.0) == pytest.approx(math.exp(-0.02))
+    assert 0.9 in abroad.nodes()

@@ -103,7 +103,9 @@ def test_day_count_is_asked_for_only_where_it_counts():
 
 def test_size_is_asked_for_as_the_definition_pays():
     """Units for money per unit, else a notional; both are named where the definition leaves it open."""
-    money, either = package.blank("european", ["alder"]), package.blank("autocall", ["alder"])
+    money, either = package.blank("european", ["alder"]), package.blank("rainbow_option", ["alder", "birch"])
+    note = package.blank("autocall", ["alder"])
+    assert "\nnotional:" in note and "units" not in note
     assert "\nunits:" in money and "notional" not in money
     assert "\nnotional:" in either and "'units:'" in either
 

@@ -95,7 +95,7 @@ def test_dates_in_order_and_every_payment_has_its_day(example: Path):
 
 def test_market_on_the_dates(tmp_path: Path):
     """Forward, vol to date and both discount factors by their closed forms (flat rates, yields, vols)."""
-    text = CALL.replace("units: 1", "notional: 1000") + MARKET.replace("assets:", "funding: {EUR: 80 bp}\nassets:")
+    text = CALL + MARKET.replace("assets:", "funding: {EUR: 80 bp}\nassets:")
     (line,) = [line for line in package.readback(written(tmp_path, text)).market if line.date == "1y"]
     assert line.discount_factor == pytest.approx(exp(-0.04), rel=1e-14)
     assert line.funded_discount_factor == pytest.approx(exp(-0.048), rel=1e-14)

@@ -214,7 +214,7 @@ def test_whole_or_not_at_all(tmp_path: Path, monkeypatch: pytest.MonkeyPatch):
 
     monkeypatch.setattr(os, "fsync", full)
     with pytest.raises(RequestError, match="cannot be written: no space left on device"):
-        write_record(tmp_path / "r.json", make_record((), "price", []))
+        write_record(tmp_path / "r.json", make_record((), []))
     assert list(tmp_path.iterdir()) == []
 
 

@@ -26,8 +26,8 @@ def test_an_example_becomes_a_tape(file: Path):
     request = load([file])
     for contract in request.contracts:
         dated, faults = date_contract(contract, request.market.valuation)
-        market = MarketMap(request.market, contract)
-        unrolled = unroll(dated, nodes=market.nodes())
+        market = MarketMap.of(request.market, dated)
+        unrolled = unroll(dated, nodes=market.nodes(), makeup=market.makeup())
         assert not faults and not unrolled.faults
         assert problems(unrolled.observed) == [] and problems(unrolled.tape) == []
         leaves = market.values(unrolled.tape.leaves)

@@ -63,6 +63,8 @@ def read_once(what: str, spot: dict | None = None, **contract) -> np.ndarray:
         ("-spot ** 0.5 / 4", -2.5),
         ("abs(60 - spot) + log(exp(2)) + sqrt(9)", 45.0),
         ("clip(spot, 0, 70)", 70.0),
+        ("clip(spot, 120, 130)", 120.0),
+        ("clip(spot, 120, 70)", 70.0),  # bounds that cross: the upper one holds
         ("min(spot, 3, 2)", 2.0),
         ("1 if spot >= 100 else 2", 1.0),
         ("1 if spot > 100 else 2", 2.0),
@@ -235,6 +237,14 @@ def test_life_runs_to_the_payment(level: float, life: float):
     assert results(dated, {0: PATH[0] | {1.0: level}})["life"] == pytest.approx(life)
 
 
+def test_life_is_that_of_the_ending_s_own_payment():
+    """Another amount of the same day that is due later does not lengthen it; without a payment of its own it does."""
+    dates, coupon = {"first": (0.5,), "expiry": (2.0,)}, event("first", pay("1", due="expiry"))
+    own = made(dates, [coupon, event("first", pay("1"), end())])
+    bare = made(dates, [coupon, event("first", end())])
+    assert results(own, {})["life"] == 0.5 and results(bare, {})["life"] == 2.0
+
+
 def test_an_unconditional_end_drops_the_rest():
     """What comes after it is not on the tape at all."""
     events = [event("first", pay("1"), end()), event("expiry", pay("spot"))]
@@ -277,8 +287,8 @@ def test_many_ends_are_grouped_by_year():
 
 def test_the_last_level_of_each_asset_is_an_output():
     """For the martingale test: asset, time and the output's name; an asset read today only has none."""
-    dated = made({"expiry": (1.0,), "now": (0.0,)}, [event("expiry", pay("of(spot, north)")),
-                                                    event("now", pay("of(spot, south)"))], assets=("north", "south"))
+    events = [event("fixings", pay("of(spot, north)")), event("now", pay("of(spot, south)"))]
+    dated = made({"fixings": (0.5, 1.0), "now": (0.0,)}, events, assets=("north", "south"))
     unrolled = unroll(dated, nodes=())
     assert unrolled.levels == {"level: north": (0, 1.0)}
     assert unrolled.grid.assets == (0,)
@@ -331,9 +341,9 @@ def test_a_watch_read_inside_its_window_covers_up_to_that_day():
     dates = {"asked": (0.25, 0.5, 1.0, 2.0)}
     dated = made(dates, [event("asked", pay("x"))], [running("x", "lowest", "spot", "asked", start="95")],
                  watched={"x": (0.25, 1.0)})
-    levels = {"low": {(0, 0.25, 0.5): 90.0, (0, 0.5, 1.0): 80.0}, 0: {0.25: 99.0, 1.0: 85.0}}
+    levels = {"low": {(0, 0.25, 0.5): 90.0, (0, 0.5, 1.0): 80.0}, 0: {0.25: 92.0, 1.0: 85.0}}
     found = results(dated, levels)
-    assert found["price"] == pytest.approx(discounted((95.0, 0.25), (90.0, 0.5), (80.0, 1.0), (80.0, 2.0)))
+    assert found["price"] == pytest.approx(discounted((92.0, 0.25), (90.0, 0.5), (80.0, 1.0), (80.0, 2.0)))
 
 
 @pytest.mark.parametrize(
@@ -373,6 +383,9 @@ def test_two_watches_without_a_joint_law_are_refused_where_they_overlap():
     assert "several assets" in texts(watches((low, 0.0, 1.0), (other, 0.5, 2.0), read=read))[0]
     assert watches((low, 0.0, 1.0), (high, 1.0, 2.0), read=read).faults == ()
     assert watches((low, 0.0, 1.0), ("of(spot, north) < 70", 0.5, 2.0), read=read).faults == ()
+    inner = watches((low, 0.0, 1.0), ("of(spot, north) < 70", 0.2, 0.4), (other, 0.6, 0.8),
+                    read="1 if (x0 and x1) and x2 else 0")
+    assert "several assets" in texts(inner)[0]  # a watch inside another does not end it
     unread = watches((low, 0.0, 1.0), (high, 0.5, 2.0), read="1 if x0 else 0")
     assert unread.faults == () and [note.law for note in unread.watches] == ["exact", "unread"]
 

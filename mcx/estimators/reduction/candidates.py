@@ -17,7 +17,7 @@ from dataclasses import dataclass
 from mcx.estimators.ready import Ready
 from mcx.estimators.reduction.laws import Law, Lognormal, above_mean, call_mean, exchange_mean
 from mcx.estimators.reduction.scheme import Control
-from mcx.estimators.reduction.turning import Day, Product, Turn, turns
+from mcx.estimators.reduction.turning import Day, Product, Terms, Turn, turns
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
 from mcx.tape.program import LevelKey
@@ -41,18 +41,45 @@ class Market:
     def __init__(self, ready: Ready):
         tape = ready.unrolled.observed
         names = ready.dated.contract.assets
-        spots = {asset: ready.market.forward(name, 0.0) for asset, name in enumerate(names)}
+        makeup = ready.market.makeup()
         known = uniform_values(tape, ready.market.values(tape.leaves))
-        keys = [step.payload for step in tape.instructions if step.op is Op.LEVEL and step.payload.time > 0.0]
+        keys = [step.payload for step in tape.instructions if step.op is Op.LEVEL and step.payload.time > 0.0
+                and not (step.payload.asset in makeup.cash and step.payload.asset in makeup.rates)]
         self.ready = ready
         self.names = names
+        self.makeup = makeup
         self.builder = Builder.of(tape)
         self.days: list[Day] = sorted({(key.asset, key.time) for key in keys})
-        self.turns = turns(tape, known, spots)
-        self.law = Law(ready.market, self.days) if self.days else None
+        self.turns = turns(tape, known, self._made_of)
+        self.law = Law(ready.market, self.days, self.forward) if self.days else None
+
+    def escrow(self, day: Day) -> float:
+        """What the cash dividends to come after a day are worth then: not part of what is lognormal."""
+        asset, time = day
+        if asset not in self.makeup.cash:
+            return 0.0
+        return float(self.ready.market.escrowed(asset, time, self.ready.unrolled.grid.times[-1]))
+
+    def forward(self, day: Day) -> float:
+        """Of the level without cash dividends to come."""
+        return self.ready.market.forward(self.names[day[0]], day[1]) - self.escrow(day)
+
+    def spot(self, asset: int) -> float:
+        return self.forward((asset, 0.0))
 
     def level(self, day: Day) -> int:
-        return self.builder.input(Op.LEVEL, LevelKey(*day))
+        """The level without cash dividends to come."""
+        level, escrow = self.builder.input(Op.LEVEL, LevelKey(*day)), self.escrow(day)
+        return self.builder.emit(Op.SUB, level, self.builder.constant(escrow)) if escrow else level
+
+    def _made_of(self, key: LevelKey) -> Terms | None:
+        day = key.asset, key.time
+        if key.time <= 0.0:
+            return Terms({(): self.ready.market.forward(self.names[key.asset], 0.0)})
+        if key.asset in self.makeup.cash and key.asset in self.makeup.rates:
+            return None  # a lognormal times the sum of another and a number
+        escrow = self.escrow(day)
+        return Terms({((day, 1.0),): 1.0, **({(): escrow} if escrow else {})})
 
     def log(self, day: Day) -> int:
         return self.builder.emit(Op.LOG, self.level(day))

@@ -14,7 +14,6 @@ from mcx.estimators.reduction.points import BRIDGE, COMPONENTS
 from mcx.estimators.reduction.scheme import Case, Draft, Inapplicable, Method, Scheme, Stage
 from mcx.estimators.reduction.stratified import STRATIFIED
 from mcx.faults import Refusal, RequestError
-from mcx.tape.steps import expand_levels
 
 METHODS: tuple[Method, ...] = (CONTROLS, HEDGE, IMPORTANCE, ANTITHETIC, STRATIFIED, BRIDGE, COMPONENTS)
 BY_NAME = {method.name: method for method in METHODS}
@@ -42,7 +41,7 @@ def scheme_of(case: Case, names: Sequence[str]) -> Scheme:
     for method in methods:
         if method.stage is Stage.LEVELS:
             draft = _changed(method, case, draft)
-    tape = expand_levels(draft.tape, case.ready.market.nodes())[0] if draft.controls else unrolled.tape
+    tape = case.ready.expanded(draft.tape) if draft.controls else unrolled.tape
     draft = replace(draft, tape=tape)
     for method in sorted(methods, key=lambda method: method.stage):
         if method.stage is not Stage.LEVELS:

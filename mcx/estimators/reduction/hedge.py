@@ -68,7 +68,7 @@ def _gains(market: Market, asset: int, times: list[float], ended: list[tuple[flo
     log_forward = {}
     for number, (start, end) in enumerate(zip(times, times[1:])):
         key = (asset, end)
-        forward = market.ready.market.forward(name, end)
+        forward = market.forward(key)
         log_forward[end] = math.log(forward)
         after = market.scaled(market.level(key), 1.0 / forward)
         gain = emit(Op.SUB, after, before)

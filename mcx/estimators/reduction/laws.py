@@ -7,7 +7,7 @@ means are of amounts, not discounted.
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -20,19 +20,23 @@ from mcx.tape.program import Leaf, LeafKind
 
 
 class Law:
-    """The joint law of the logs of levels on some dates: normal with `means` (days,) and `covariance` (days, days)."""
+    """The joint law of the logs of levels, without cash dividends to come, on some dates: normal with `means` (days,)
+    and `covariance` (days, days). Levels that are converted at the rate of the day move by that rate too."""
 
-    def __init__(self, market: MarketMap, days: Sequence[Day]):
+    def __init__(self, market: MarketMap, days: Sequence[Day], forward: Callable[[Day], float]):
         self.days = tuple(sorted(days))
         self._at = {day: number for number, day in enumerate(self.days)}
+        rates = market.makeup().rates
         times = sorted({time for _, time in days})
         assets = sorted({asset for asset, _ in days})
-        to_date = market.step_covariance(assets, np.zeros(len(times)), np.array(times))  # (times, assets, assets)
+        moving = sorted({*assets, *(rates[asset] for asset in assets if asset in rates)})
+        made_of = np.array([[number in (asset, rates.get(asset)) for number in moving] for asset in assets], dtype=float)
+        single = market.step_covariance(moving, np.zeros(len(times)), np.array(times))  # (times, moving, moving)
+        to_date = made_of @ single @ made_of.T  # (times, assets, assets)
         index = np.array([[times.index(time), assets.index(asset)] for asset, time in self.days]).reshape(-1, 2)
         first = np.minimum.outer(index[:, 0], index[:, 0])
         self.covariance = to_date[first, index[:, 1][:, None], index[:, 1][None, :]]
-        names = market.contract.assets
-        self.log_forwards = np.log([market.forward(names[asset], time) for asset, time in self.days])
+        self.log_forwards = np.log([forward(day) for day in self.days])
         self.means = self.log_forwards - 0.5 * np.diag(self.covariance)
 
     def log_forward(self, day: Day) -> float:

@@ -12,7 +12,6 @@ from mcx.estimators.reduction.fit import fitted
 from mcx.estimators.reduction.hedge import hedged, trading_times
 from mcx.estimators.reduction.scheme import Case, Draft, Scheme
 from mcx.machine.run import Stream, values_by_path
-from mcx.tape.steps import expand_levels
 
 PATHS = 1 << 14
 
@@ -38,7 +37,7 @@ def _schemes(case: Case, counts: list[int]) -> Iterator[tuple[int, Scheme]]:
     yield 0, Scheme((), case.ready.program)
     for dates in counts:
         draft = hedged(case, Draft(case.ready.unrolled.observed), dates)
-        draft = replace(draft, tape=expand_levels(draft.tape, case.ready.market.nodes())[0])
+        draft = replace(draft, tape=case.ready.expanded(draft.tape))
         yield dates, fitted(case, ("hedge",), draft)
 
 

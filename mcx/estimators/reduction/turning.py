@@ -60,9 +60,9 @@ class Turn:
     jumps: bool
 
 
-def turns(tape: Tape, known: Sequence[float | None], spots: Mapping[int, float]) -> tuple[Turn, ...]:
-    """Every place where the tape turns, once; `known`: what is the same on every path, by value; `spots`: the level of
-    each asset at time 0."""
+def turns(tape: Tape, known: Sequence[float | None], level: Callable[[LevelKey], Terms | None]) -> tuple[Turn, ...]:
+    """Every place where the tape turns, once; `known`: what is the same on every path, by value; `level`: what a level
+    is made of, None where that is no sum of products."""
     found: dict[Turn, None] = {}
     forms: list[tuple[Form, ...]] = []
     for number, step in enumerate(tape.instructions):
@@ -72,19 +72,13 @@ def turns(tape: Tape, known: Sequence[float | None], spots: Mapping[int, float])
         if known[number] is not None:
             forms.append((Terms({(): known[number]}),))
         elif step.op is Op.LEVEL:
-            forms.append((_level(step.payload, spots),))
+            forms.append(_distinct([level(step.payload)]))
         elif OPS[step.op].flag:
             forms.append((Terms({}), Terms({(): 1.0})))
         else:
             rule = _RULES.get(step.op)
             forms.append(_distinct(rule(*operands)) if rule and all(operands) else ())
     return tuple(found)
-
-
-def _level(key: LevelKey, spots: Mapping[int, float]) -> Terms:
-    if key.time <= 0.0:
-        return Terms({(): spots[key.asset]})
-    return Terms({(((key.asset, key.time), 1.0),): 1.0})
 
 
 def _distinct(forms: Iterable[Form | None]) -> tuple[Form, ...]:

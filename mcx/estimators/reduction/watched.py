@@ -60,7 +60,7 @@ def watched_candidates(market: Market) -> Iterator[Candidate]:
         yield from _survival(market, watched)
         yield from _extremes(market, watched, watched.up, watched.level)
     for asset in _compared_with_itself(market):
-        spot = market.ready.market.forward(market.names[asset], 0.0)
+        spot = market.spot(asset)
         watched = _on(market, asset, spot, spot, max(day[1] for day in market.days if day[0] == asset))
         for up in (False, True):
             yield from _extremes(market, watched, up, spot)
@@ -88,7 +88,7 @@ def _watched(market: Market) -> list[Watched]:
                 groups.setdefault((day[0], float(f"{turn.strike:.12g}")), set()).add(day)
     found = []
     for (asset, level), days in sorted(groups.items(), key=lambda group: (-len(group[1]), group[0])):
-        spot = market.ready.market.forward(market.names[asset], 0.0)
+        spot = market.spot(asset)
         if len(days) >= FEWEST_DATES and abs(math.log(level / spot)) > ALIKE:
             found.append(_on(market, asset, level, spot, max(day[1] for day in days)))
     return found[:MOST_BARRIERS]
@@ -155,6 +155,8 @@ def _strikes_at(market: Market, day: Day) -> list[float]:
 def _extremes(market: Market, watched: Watched, up: bool, level: float) -> Iterator[Candidate]:
     """What the continuous extreme, moved in, is beyond a level."""
     if watched.drift is None or not np.all(watched.variances > 0.0):
+        return
+    if watched.asset in market.makeup.cash or watched.asset in market.makeup.rates:
         return
     emit, constant = market.builder.emit, market.builder.constant
     end, start, variance = watched.days[-1][1], math.log(watched.spot), float(watched.variances.sum())

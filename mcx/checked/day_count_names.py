@@ -1,0 +1,34 @@
+"""The names of day counts that documents may use: 2006 ISDA Definitions, section 4.16."""
+
+from __future__ import annotations
+
+from types import MappingProxyType
+
+from mcx.checked.reading import listed
+from mcx.faults import Fault, did_you_mean
+from mcx.text.located import Node, Scalar
+from mcx.text.scalars import expected
+
+# Each name with the one that `dates/day_counts.py` uses.
+DAY_COUNTS: MappingProxyType[str, str] = MappingProxyType({
+    name: names[0]
+    for names in (
+        ("Actual/Actual (ISDA)", "Actual/Actual", "Act/Act (ISDA)", "Act/Act"),
+        ("Actual/Actual (ICMA)", "Act/Act (ICMA)"),
+        ("Actual/365 (Fixed)", "Act/365 (Fixed)", "A/365 (Fixed)", "A/365F"),
+        ("Actual/360", "Act/360", "A/360"),
+        ("30/360", "360/360", "Bond Basis"),
+        ("30E/360", "Eurobond Basis"),
+        ("30E/360 (ISDA)",),
+    )
+    for name in names
+})
+
+
+def day_count_name(node: Node) -> str | Fault:
+    """The name of a day count, as `dates/day_counts.py` writes it."""
+    if isinstance(node, Scalar) and node.text in DAY_COUNTS:
+        return DAY_COUNTS[node.text]
+    near = did_you_mean(node.text, DAY_COUNTS) if isinstance(node, Scalar) else ""
+    names = listed(dict.fromkeys(DAY_COUNTS.values()), "or")
+    return expected(f"a day count: {names}", node, near.removeprefix("; "))

@@ -1,0 +1,112 @@
+"""Sensitivities under cash dividends, quanto, composite and funding: closed forms, and what is refused."""
+
+from __future__ import annotations
+
+from math import exp, log, sqrt
+from pathlib import Path
+
+import pytest
+from scipy.special import ndtr
+
+import mcx
+
+SEED = 0x428A2F98D728AE22
+HEAD = "contract: c\ncurrency: EUR\nunits: 1\nassets: [harbour]\n"
+CALL = "payoff: european\nterms: {side: call, strike: 100, expiry: 1y}\n"
+EARLY = """payoff: early
+about: A digital while a dividend is to come, and the level after it.
+terms: {first: {type: date}, last: {type: date}}
+events:
+  - at: first
+    if: spot >= 98
+    then:
+      - {pay: 100, as: early}
+  - {at: last, pay: spot, as: late}
+---
+"""
+
+
+def market(asset: str, more: str = "") -> str:
+    return f"---\nmarket: 0y\nrates: {{EUR: 4%, USD: 2%}}\nassets:\n  harbour: {{spot: 100, {asset}}}\n{more}"
+
+
+def greeks(tmp_path: Path, text: str, paths: int = 2**18):
+    """Every sensitivity by name, asset or currency, and the result."""
+    file = tmp_path / "case.yaml"
+    file.write_text(text)
+    result = mcx.greeks(file, paths=paths, seed=SEED)
+    return {(each.name, each.asset): each for each in result.greeks}, result
+
+
+def black(forward: float, vol: float, time: float = 1.0, strike: float = 100.0) -> tuple[float, float, float]:
+    """Undiscounted call, its derivative by the forward and by the vol."""
+    d1 = log(forward / strike) / (vol * sqrt(time)) + vol * sqrt(time) / 2
+    value = forward * ndtr(d1) - strike * ndtr(d1 - vol * sqrt(time))
+    return value, float(ndtr(d1)), forward * sqrt(time) * exp(-d1 * d1 / 2) / sqrt(2 * 3.141592653589793)
+
+
+def near(found, truth: float) -> None:
+    assert abs(found.value - truth) < 4 * found.standard_error and found.standard_error < 0.01 * abs(truth)
+
+
+def test_call_with_cash_dividends_and_funding(tmp_path: Path):
+    """The spot less today's value of the dividend, which the rate moves too; funding discounts alone."""
+    found, _ = greeks(tmp_path, HEAD + CALL + market("currency: EUR, dividends: [{ex: 0.5y, cash: 8}], vol: 20%",
+                                                     "funding: {EUR: 1%}\n"))
+    left, df = 100 - 8 * exp(-0.02), exp(-0.05)
+    value, by_forward, by_vol = black(left * exp(0.04), 0.2)
+    near(found["delta", "harbour"], df * by_forward * exp(0.04))
+    near(found["vega", "harbour"], 0.01 * df * by_vol)
+    by_rate = by_forward * (left * exp(0.04) + 8 * 0.5 * exp(-0.02) * exp(0.04))
+    near(found["rho", "EUR"], 1e-4 * df * (by_rate - value))
+    near(found["funding", "EUR"], -1e-4 * df * value)
+
+
+def test_quanto_and_composite(tmp_path: Path):
+    """Delta, and vega with the vol in drift (quanto) and in the joint variance and forward (composite)."""
+    quanto = "currency: USD, yield: 1%, vol: 20%, quanto: {fx_vol: 10%, fx_correlation: 50%, fx: EUR per USD}"
+    found, _ = greeks(tmp_path, HEAD + "conversion: {harbour: quanto}\n" + CALL + market(quanto))
+    forward, df = 100 * exp(0.02 - 0.01 - 0.5 * 0.2 * 0.1), exp(-0.04)
+    value, by_forward, by_vol = black(forward, 0.2)
+    near(found["delta", "harbour"], df * by_forward * forward / 100)
+    near(found["vega", "harbour"], 0.01 * df * (by_vol - by_forward * forward * 0.05))
+    near(found["rho", "USD"], 1e-4 * df * by_forward * forward)
+    near(found["rho", "EUR"], -1e-4 * df * value)
+    rate = "fx: {EUR per USD: {spot: 0.9, vol: 12%}}\ncorrelation: {harbour/EUR per USD: 40%}\n"
+    found, _ = greeks(tmp_path, HEAD + "conversion: {harbour: composite}\n" + CALL.replace("100", "90")
+                      + market("currency: USD, yield: 1%, vol: 20%", rate))
+    vol = sqrt(0.04 + 0.0144 + 2 * 0.4 * 0.2 * 0.12)
+    value, by_forward, by_vol = black(90 * exp(0.03), vol, strike=90.0)
+    near(found["delta", "harbour"], df * by_forward * 0.9 * exp(0.03))
+    near(found["vega", "harbour"], 0.01 * df * by_vol * (0.2 + 0.4 * 0.12) / vol)
+    near(found["rho", "EUR"], 1e-4 * df * (by_forward * 90 * exp(0.03) - value))
+
+
+def test_a_jump_that_looks_at_dividends_to_come(tmp_path: Path):
+    """The delta holds against the closed form; by the rate, which moves the dividends' value under the held draws, the
+    likelihood ratio is refused with the line."""
+    text = EARLY + HEAD + "payoff: early\nterms: {first: 0.5y, last: 1y}\n" + market(
+        "currency: EUR, dividends: [{ex: 0.75y, cash: 20}], vol: 20%")
+    found, result = greeks(tmp_path, text)
+    left, strike, deviation = 100 - 20 * exp(-0.03), 98 - 20 * exp(-0.01), 0.2 * sqrt(0.5)
+    d2 = (log(left / strike) + 0.02) / deviation - deviation / 2
+    density = exp(-d2 * d2 / 2) / sqrt(2 * 3.141592653589793)
+    near(found["delta", "harbour"], 100 * exp(-0.02) * density / (left * deviation) + 1)
+    assert ("rho", "EUR") not in found
+    refused = {(each.name, each.asset): each.reason for each in result.refused}
+    assert "cash dividends still to come are part of a level that is compared at" in refused["rho", "EUR"]
+
+
+@pytest.mark.parametrize("size", ["1y", "0.75y"])
+def test_a_jump_after_the_last_dividend_has_its_rho(tmp_path: Path, size: str):
+    """On or after the ex date nothing is to come, and nothing is refused."""
+    digital = f"payoff: digital\nterms: {{side: call, pays: cash, amount: 100, strike: 95, expiry: {size}}}\n"
+    asset = "currency: EUR, dividends: [{ex: 0.75y, cash: 8}], vol: 20%"
+    found, result = greeks(tmp_path, HEAD + digital + market(asset), paths=2**19)
+    assert result.refused == ()
+    time = float(size[:-1])
+    left, deviation = 100 - 8 * exp(-0.03), 0.2 * sqrt(time)
+    d2 = (log(left / 95) + 0.04 * time) / deviation - deviation / 2
+    density = exp(-d2 * d2 / 2) / sqrt(2 * 3.141592653589793)
+    by_rate = density / deviation * (time + 8 * 0.75 * exp(-0.03) / left) - time * ndtr(d2)
+    near(found["rho", "EUR"], 1e-4 * 100 * exp(-0.04 * time) * by_rate)
