@@ -22,8 +22,8 @@ from mcx.estimators.estimate import Estimate
 from mcx.estimators.ladder import Point, Step, grid, ladder, spot_shifts, today, turning
 from mcx.estimators.methods import PATHWISE, Method, methods
 from mcx.estimators.pace import announce, pace
-from mcx.estimators.plan import Plan, Precision, plan
-from mcx.estimators.price import Ready
+from mcx.estimators.plan import Independent, Plan, Precision, plan
+from mcx.estimators.ready import Ready
 from mcx.estimators.revalue import (
     IN_PROPORTION,
     RATES,
@@ -160,9 +160,9 @@ class _Run:
     def _plan(self, asked: Precision) -> Plan:
         program = replace(self.ready.program, outputs=self.ready.program.outputs[:1])
 
-        def prices(paths: int) -> np.ndarray:
-            return values_by_path(program, paths=paths, seed=self.pilot.seed, stream=Stream.PILOT,
-                                  threads=self.pilot.threads)[0]
+        def prices(paths: int) -> Independent:
+            return Independent(values_by_path(program, paths=paths, seed=self.pilot.seed, stream=Stream.PILOT,
+                                              threads=self.pilot.threads)[0])
 
         def seconds_for(paths: int) -> float:
             begun = time.perf_counter()

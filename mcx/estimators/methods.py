@@ -13,8 +13,8 @@ from mcx.checked.market import Market
 from mcx.estimators.batches import Sampling
 from mcx.estimators.derivative_tape import DerivativeTape, derivative_tape, without_first_levels
 from mcx.estimators.differentiate import Differentiator
-from mcx.estimators.price import Ready
 from mcx.estimators.proxy import with_proxy
+from mcx.estimators.ready import Ready
 from mcx.faults import Refusal
 from mcx.leaves.market_map import MarketMap
 from mcx.machine.run import values_by_path

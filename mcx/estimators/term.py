@@ -12,7 +12,7 @@ from mcx.checked.payoff import Term
 from mcx.dates.dated_contract import DatedContract
 from mcx.estimators.batches import Sampling
 from mcx.estimators.estimate import Estimate
-from mcx.estimators.price import prepare
+from mcx.estimators.ready import prepare
 from mcx.estimators.roots import Solutions, solutions
 from mcx.faults import RequestError, did_you_mean
 

@@ -21,7 +21,8 @@ from mcx.estimators.footing import Footing, footing, reference_shifts
 from mcx.estimators.levers import Lever, alone, levers
 from mcx.estimators.margin import Margin, day_one_margin
 from mcx.estimators.plan import Precision
-from mcx.estimators.price import Ready, Valuation, value
+from mcx.estimators.price import Valuation, value
+from mcx.estimators.ready import Ready
 from mcx.estimators.readings import ReadingsValuation, ReadingValue, value_readings
 from mcx.estimators.revalue import Revaluer, impossible
 from mcx.estimators.roots import SCANNED, Solution, Solutions, solutions

@@ -8,7 +8,7 @@ from mcx.checked.market import Market
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.greeks import Found, Value, Wish
 from mcx.estimators.ladder import Point, Step
-from mcx.estimators.price import Ready
+from mcx.estimators.ready import Ready
 from mcx.estimators.sensitivities import Curvature, Sensitivity
 from mcx.report.cautions import assumptions, cautions, limits
 from mcx.report.greek_results import AssetDelta, Greek, GreeksResult, GridPoint, Jump, Refused, Rung

@@ -7,7 +7,7 @@ from collections.abc import Iterator
 from mcx.checked.payoff import Pay
 from mcx.dates.dated_contract import DatedContract, Day
 from mcx.dates.day_counts import year_fraction
-from mcx.estimators.price import Ready
+from mcx.estimators.ready import Ready
 from mcx.leaves.market_map import MarketMap
 from mcx.report.distances import distances
 from mcx.report.events import event_label

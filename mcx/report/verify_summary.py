@@ -8,7 +8,7 @@ from collections.abc import Iterator, Sequence
 from mcx.checked.dealer_quote import DealerQuote
 from mcx.checked.market import Market
 from mcx.estimators.levers import SHARES, Lever
-from mcx.estimators.price import Ready
+from mcx.estimators.ready import Ready
 from mcx.estimators.readings import ReadingNotValued
 from mcx.estimators.roots import Solution
 from mcx.estimators.term import Solved

@@ -14,7 +14,8 @@ from mcx.checked.load import load
 from mcx.dates.dating import date_on
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.plan import FEWEST_PLANNED, FIRST_PILOT, precision
-from mcx.estimators.price import Ready, Valuation, prepare, value
+from mcx.estimators.price import Valuation, value
+from mcx.estimators.ready import Ready, prepare
 from mcx.machine.run import NonFinitePath, Stream, levels
 
 THOUSAND = precision(1000, None, None)
