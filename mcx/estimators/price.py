@@ -72,7 +72,7 @@ def value(
     """
     assert ready.unrolled.tape.outputs[0].kind == "price", "the price is the first output"
     load_kernels(ready.program, notice)  # before any clock starts
-    case = Case(ready, seed, threads, notice)
+    case = Case(ready, seed, threads)
     scheme = best(case) if reduction == (AUTO,) else scheme_of(case, reduction)
     found = sampled(ready, scheme, asked, seed=seed, threads=threads, progress=progress, notice=notice)
     return replace(found, hedge=residuals(case)) if HEDGE.name in scheme.names else found
@@ -81,7 +81,7 @@ def value(
 def sampled(ready: Ready, scheme: Scheme, asked: Precision, *, seed: int, threads: int | None = None,
             progress: Progress | None = None, notice: Notice | None = None) -> Valuation:
     """The value of a contract by a scheme; see `value`."""
-    sampler = Sampler(scheme, seed, threads, notice)
+    sampler = Sampler(scheme, seed, threads)
 
     def seconds_for(paths: int) -> float:
         begun = time.perf_counter()
