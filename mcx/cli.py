@@ -169,7 +169,7 @@ def methods(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
 @AS_JSON
 @click.option("--record", type=click.Path(), help="Write a valuation record to this new file.")
 def verify(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
-    """Can the dealer's quote be right? The gap, and what would explain it."""
+    """Can the dealer's quote be right? What would explain the gap?"""
     from mcx import api
 
     with _progress() as (progress, notice):
