@@ -15,6 +15,7 @@ from mcx.checked.payoff import Assign, Continuous, Pay, Running
 from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Occasion, Watch
 from mcx.leaves.market_map import MarketMap
 from mcx.report.events import event_label, event_line
+from mcx.report.quotes import quotes
 from mcx.report.results import (
     AssetDate,
     DateLine,
@@ -62,6 +63,7 @@ def readback(dated: DatedContract, market: Market | None, path: PathResult | Non
         watches=tuple(_watches(dated, settled, unrolled)),
         dates=tuple(_dates(dated, words, settled)),
         assumptions=(*dated.assumptions, *(underlyings(dated, market_map) if market_map else ())),
+        quotes=tuple(quotes(market_map)) if market_map else (),
         market=tuple(_market(dated, market_map)) if market_map else (),
         path=path,
     )

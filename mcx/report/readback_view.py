@@ -34,6 +34,9 @@ def show_readback(result: Readback, page: Page) -> None:
     if result.assumptions:
         page.heading("assumptions")
         page.items(result.assumptions)
+    if result.quotes:
+        page.heading("the market today")
+        page.named((quote.name, quote.text) for quote in result.quotes)
     if result.market:
         _market(result.market, page)
     if result.path:

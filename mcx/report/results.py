@@ -178,7 +178,7 @@ class TermLine(Result):
 
 @dataclass(frozen=True, slots=True)
 class Sentence(Result):
-    """What a `let` name or a running value means."""
+    """What a name means: a `let` name, a running value, a quote of the market."""
 
     name: str
     text: str
@@ -267,7 +267,8 @@ class PathResult(Result):
 
 @dataclass(frozen=True, slots=True)
 class Readback(Result):
-    """What a contract says: `mcx readback`. `market` is empty without a market, `path` None without given levels."""
+    """What a contract says: `mcx readback`. `quotes` (spots, correlations, funding) and `market` are empty
+    without a market, `path` is None without given levels."""
 
     contract: str
     payoff: str
@@ -280,6 +281,7 @@ class Readback(Result):
     watches: tuple[WatchLine, ...]
     dates: tuple[DateLine, ...]
     assumptions: tuple[str, ...]
+    quotes: tuple[Sentence, ...]
     market: tuple[MarketDate, ...]
     path: PathResult | None
 

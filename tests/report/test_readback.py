@@ -112,6 +112,19 @@ def test_market_on_the_dates(tmp_path: Path):
     assert asset.forward == pytest.approx(100 * exp(0.04 - 0.015), rel=1e-14)
 
 
+def test_quotes_of_the_market(tmp_path: Path):
+    """Spots with their currency, correlations as stated, the funding spread or that there is none."""
+    quotes = {quote.name: quote.text for quote in readbacks(NOTE)[0].quotes}
+    assert quotes == {"spot of harbour": "4,180.2 EUR", "spot of lantern": "801.1 EUR",
+                      "correlation harbour/lantern": "65 %", "issuer's funding spread": "80 bp"}
+    found = package.readback(written(tmp_path, CALL + MARKET)).quotes
+    assert found[-1].text == "not stated: none is taken"
+    curve = MARKET.replace("assets:", "funding: {EUR: {1y: 80 bp, 3y: 0.95%}}\nassets:")
+    assert package.readback(written(tmp_path, CALL + curve)).quotes[-1].text == "1y 80 bp, 3y 95 bp"
+    composite = package.readback(EXAMPLES / "dividends_and_currencies.yaml").readbacks[1]
+    assert any(quote.name == "spot of EUR per CHF" for quote in composite.quotes)
+
+
 def test_vol_term_structure_on_the_dates(tmp_path: Path):
     """Black vols at the nodes are those of the market; between them total variance is linear."""
     market = MARKET.replace("vol: 22%", "vol: {6m: 20%, 1y: 30%}")
@@ -129,7 +142,7 @@ def test_vol_term_structure_on_the_dates(tmp_path: Path):
 def test_without_a_market(tmp_path: Path):
     """Everything but the market's numbers."""
     found = package.readback(written(tmp_path, CALL))
-    assert found.market == () and found.path is None and found.events
+    assert found.market == found.quotes == () and found.path is None and found.events
 
 
 @pytest.mark.parametrize(("formula", "words"), [
