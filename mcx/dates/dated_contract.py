@@ -86,7 +86,8 @@ class DatedContract:
     """Moments in order of time, and the continuous watches beside them.
 
     `schedules` gives the days of every date, dates and (dated) watch term. `calendar_version` names the holiday
-    package and its version, '' where no holidays were asked for. `assumptions` are sentences to print with any value.
+    package and its version, '' where no holidays were asked for. `assumptions` are sentences to print with any value,
+    `warnings` are about what looks like a slip.
     """
 
     contract: Contract
@@ -97,6 +98,7 @@ class DatedContract:
     watches: tuple[Watch, ...]
     calendar_version: str = ""
     assumptions: tuple[str, ...] = ()
+    warnings: tuple[str, ...] = ()
 
     @property
     def last(self) -> Day:

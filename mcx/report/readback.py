@@ -15,6 +15,7 @@ from mcx.checked.payoff import Assign, Continuous, Pay, Running
 from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Occasion, Watch
 from mcx.leaves.market_map import MarketMap
 from mcx.report.events import event_label, event_line
+from mcx.report.plausible import implausible
 from mcx.report.quotes import quotes
 from mcx.report.results import (
     AssetDate,
@@ -62,6 +63,7 @@ def readback(dated: DatedContract, market: Market | None, path: PathResult | Non
         events=tuple(event_line(event, dated, words, settled) for event in contract.payoff.events),
         watches=tuple(_watches(dated, settled, unrolled)),
         dates=tuple(_dates(dated, words, settled)),
+        warnings=tuple(implausible(dated, market_map)),
         assumptions=(*dated.assumptions, *(underlyings(dated, market_map) if market_map else ())),
         quotes=tuple(quotes(market_map)) if market_map else (),
         market=tuple(_market(dated, market_map)) if market_map else (),

@@ -116,8 +116,8 @@ class PriceResult(Result):
 
     `notional` or `units` is None. `valuation` is None for textbook markets. `ends` holds how often the contract ended
     early on each date, `reached_maturity` how often it did not, and `expected_life` the years to the payment that ends
-    it. `warnings` are about this run, `assumptions` what was taken as given, `limits` what the model leaves out,
-    `cautions` how the number may be used.
+    it. `warnings` are about this run and about what looks like a slip, `assumptions` what was taken as given, `limits`
+    what the model leaves out, `cautions` how the number may be used.
     """
 
     contract: str
@@ -267,8 +267,8 @@ class PathResult(Result):
 
 @dataclass(frozen=True, slots=True)
 class Readback(Result):
-    """What a contract says: `mcx readback`. `quotes` (spots, correlations, funding) and `market` are empty
-    without a market, `path` is None without given levels."""
+    """What a contract says: `mcx readback`. `warnings` are about what looks like a slip; `quotes` (spots, correlations,
+    funding) and `market` are empty without a market, `path` is None without given levels."""
 
     contract: str
     payoff: str
@@ -280,6 +280,7 @@ class Readback(Result):
     events: tuple[EventLine, ...]
     watches: tuple[WatchLine, ...]
     dates: tuple[DateLine, ...]
+    warnings: tuple[str, ...]
     assumptions: tuple[str, ...]
     quotes: tuple[Sentence, ...]
     market: tuple[MarketDate, ...]

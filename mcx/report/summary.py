@@ -9,6 +9,7 @@ from mcx.estimators.estimate import Estimate
 from mcx.estimators.price import Ready, Valuation
 from mcx.report.cautions import assumptions, cautions, limits, warnings
 from mcx.report.given_path import day_of
+from mcx.report.plausible import implausible
 from mcx.report.results import (
     Amount,
     Checks,
@@ -59,7 +60,7 @@ def price_result(ready: Ready, market: Market, valuation: Valuation) -> PriceRes
         expected_life=life.value,
         expected_life_standard_error=life.standard_error,
         checks=Checks(martingale, tuple(Stage(e.paths, e.value, e.standard_error) for e in valuation.stages)),
-        warnings=tuple(warnings(valuation, ready.unrolled.tape, martingale, met)),
+        warnings=(*warnings(valuation, ready.unrolled.tape, martingale, met), *implausible(dated, ready.market)),
         assumptions=tuple(dict.fromkeys(assumptions(dated, market, ready.market))),
         limits=tuple(limits(dated)),
         cautions=tuple(cautions(dated, bool(conditions or ends))),
