@@ -143,9 +143,8 @@ class PriceResult(Result):
     `paths` counts both paths of a pair. `hedge` is empty unless gains of a hedge are among the methods. `owed` are
     amounts that fixings have settled and that are not yet paid; they are part of the price, which is dirty: `accrued` is
     the interest of certain coupons in their running period, and `clean` the price less that. `ended` is the date on which
-    the contract has ended already, '' where it lives. `warnings` are about this run, `assumptions` what was taken as
-    given, `limits` what the model leaves out,
-    `cautions` how the number may be used.
+    the contract has ended already, '' where it lives. `warnings` are about this run and about what looks like a slip,
+    `assumptions` what was taken as given, `limits` what the model leaves out, `cautions` how the number may be used.
     """
 
     contract: str
@@ -212,7 +211,7 @@ class TermLine(Result):
 
 @dataclass(frozen=True, slots=True)
 class Sentence(Result):
-    """What a `let` name or a running value means."""
+    """What a name means: a `let` name, a running value, a quote of the market."""
 
     name: str
     text: str
@@ -367,8 +366,9 @@ class CalendarView(Result):
 
 @dataclass(frozen=True, slots=True)
 class Readback(Result):
-    """What a contract says: `mcx readback`. `market` is empty without a market, `path` None without given
-    levels, `state` None without a dated market."""
+    """What a contract says: `mcx readback`. `warnings` are about what looks like a slip; `quotes` (spots, correlations,
+    funding) and `market` are empty without a market, `path` None without given levels, `state` None without a dated
+    market."""
 
     contract: str
     payoff: str
@@ -380,7 +380,9 @@ class Readback(Result):
     events: tuple[EventLine, ...]
     watches: tuple[WatchLine, ...]
     dates: tuple[DateLine, ...]
+    warnings: tuple[str, ...]
     assumptions: tuple[str, ...]
+    quotes: tuple[Sentence, ...]
     market: tuple[MarketDate, ...]
     path: PathResult | None
     state: StateView | None

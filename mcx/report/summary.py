@@ -10,6 +10,7 @@ from mcx.estimators.price import Valuation
 from mcx.estimators.ready import Ready
 from mcx.report.cautions import assumptions, cautions, limits, warnings
 from mcx.report.given_path import day_of
+from mcx.report.plausible import implausible
 from mcx.report.results import (
     Amount,
     Checks,
@@ -68,7 +69,7 @@ def price_result(ready: Ready, market: Market, valuation: Valuation) -> PriceRes
         clean=price.value - accrued(dated, ready.unrolled.state),
         ended=str(ready.unrolled.state.ended or ""),
         checks=Checks(martingale, tuple(Stage(e.paths, e.value, e.standard_error) for e in valuation.stages)),
-        warnings=tuple(warnings(valuation, ready.unrolled.tape, martingale, met)),
+        warnings=(*warnings(valuation, ready.unrolled.tape, martingale, met), *implausible(dated, ready.market)),
         assumptions=tuple(dict.fromkeys((*standing(ready), *assumptions(dated, market, ready.market)))),
         limits=tuple(limits(dated)),
         cautions=tuple(cautions(dated, bool(conditions or ends))),
