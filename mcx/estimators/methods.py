@@ -95,10 +95,10 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
         refusals = {}
         if likelihood and (reason := read_today(tape, known)):
             refusals["spot"] = reason
-        if likelihood and (reason := dividends_compared(tape, known)):
-            blended = any(market.assets[name].blend for name in contract.assets)
+        blended = any(market.assets[name].blend for name in contract.assets)
+        if likelihood and (reason := dividends_compared(tape, known, blended)):
             refusals |= {kind: reason for kind in ("rate", "yield", *(("spot",) if blended else ()))}
-        if reason := still or second_order_trouble(tape, made):
+        if reason := still or second_order_trouble(tape, made, blended):
             refusals["gamma"] = reason
         return Method(name, made, contract, refusals)
 
@@ -147,12 +147,14 @@ def read_today(tape: Tape, known: Sequence[float | None]) -> str:
     return ""
 
 
-def dividends_compared(tape: Tape, known: Sequence[float | None]) -> str:
+def dividends_compared(tape: Tape, known: Sequence[float | None], blended: bool = False) -> str:
     """Why a likelihood ratio by a rate would miss something: cash dividends still to come are part of a level that is
-    compared, and their value moves while the draws are held; '' where they are not."""
+    compared, and their value moves while the draws are held; so do the shares that a blend makes of them, which an
+    extreme that is watched up to the ex date looks at. '' where they are not."""
     moved: set[int] = set()
     for number, step in enumerate(tape.instructions):
-        escrow = step.op is Op.LEAF and step.payload.kind in ESCROWS and known[number] != 0.0
+        kinds = (*ESCROWS, LeafKind.JUMP) if blended else ESCROWS
+        escrow = step.op is Op.LEAF and step.payload.kind in kinds and known[number] != 0.0
         if escrow or any(k in moved for k in step.operands):
             moved.add(number)
         if step.op in COMPARED and any(k in moved for k in step.operands) and known[number] is None:
@@ -161,8 +163,11 @@ def dividends_compared(tape: Tape, known: Sequence[float | None]) -> str:
     return ""
 
 
-def second_order_trouble(tape: Tape, made: DerivativeTape) -> str:
-    """Why there is no gamma; '' where there is one."""
+def second_order_trouble(tape: Tape, made: DerivativeTape, blended: bool = False) -> str:
+    """Why there is no gamma; '' where there is one. `blended`: shares of the level that are made of cash dividends."""
+    if blended:
+        return ("dividends are blended from cash into shares of the level, which move with the spot; a second "
+                "derivative through both is not taken")
     if any(map(_is_today, tape.instructions)):
         return "the payoff reads today's level itself beside later ones; a second derivative through both is not taken"
     if made.rough:

@@ -51,8 +51,7 @@ class Scores:
     edges      what comes on top by the log spots
     spots      the whole score by the log spot of each asset
     second     (d2 p / dx dy) / p for the log spots of each two assets, both orders; for each asset with itself. Where
-    there
-               are edges it is not complete, and would have no finite variance
+               there are edges it is not complete, and would have no finite variance
     """
 
     first: tuple[Score, ...]
@@ -167,8 +166,11 @@ class _Scores:
         if by_variance is None:  # nobody reads it
             return
         self.first.append(Score(leaf, by_variance, self.step_of(number)))
-        if self.tape.instructions[start].op is Op.LEAF:  # the log spot
-            asset = leaf.asset
+        if self.known[start] is None:
+            return
+        for asset in (leaf.asset, leaf.other):  # the log spot, or the sum of two: of an asset and a rate of exchange
+            if asset < 0:
+                continue
             self.spots[asset] = self.builder.emit(Op.ADD, self.spots[asset], by_start)
             if bend is None:
                 self.edges.append(self._edge(number, asset))
