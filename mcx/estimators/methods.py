@@ -81,6 +81,8 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
     leaf_values = dict(zip(tape.leaves, values, strict=True))
     still = without_own_randomness(leaf_values, contract)
 
+    blended = any(market.assets[name].blend for name in contract.assets)
+
     def by_path(with_basis: Tape) -> np.ndarray:
         return values_by_path(lower(with_basis, values), seed=pilot.seed, paths=pilot.paths, stream=pilot.stream,
                               threads=pilot.threads)
@@ -90,14 +92,15 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
         if likelihood and pilot and not still:
             logs = {leaf.asset: value for leaf, value in leaf_values.items() if leaf.kind is LeafKind.LOG_SPOT}
             own, proxy = with_proxy(tape, likelihood, logs, by_path)
+        compared = dividends_compared(tape, known, blended) if likelihood else ""
+        levels = bool(compared) and not in_extremes(tape, blended)
         made = derivative_tape(own, unrolled.grid, len(contract.assets), uniform_values(own, values), pathwise=pathwise,
-                               likelihood=likelihood, second=not still, proxy=proxy)
+                               likelihood=likelihood, second=not still, proxy=proxy, levels=levels)
         refusals = {}
         if likelihood and (reason := read_today(tape, known)):
             refusals["spot"] = reason
-        blended = any(market.assets[name].blend for name in contract.assets)
-        if likelihood and (reason := dividends_compared(tape, known, blended)):
-            refusals |= {kind: reason for kind in ("rate", "yield", *(("spot",) if blended else ()))}
+        if compared and not levels:
+            refusals |= {kind: compared for kind in ("rate", "yield", *(("spot",) if blended else ()))}
         if reason := still or second_order_trouble(tape, made, blended):
             refusals["gamma"] = reason
         return Method(name, made, contract, refusals)
@@ -148,9 +151,9 @@ def read_today(tape: Tape, known: Sequence[float | None]) -> str:
 
 
 def dividends_compared(tape: Tape, known: Sequence[float | None], blended: bool = False) -> str:
-    """Why a likelihood ratio by a rate would miss something: cash dividends still to come are part of a level that is
-    compared, and their value moves while the draws are held; so do the shares that a blend makes of them, which an
-    extreme that is watched up to the ex date looks at. '' where they are not."""
+    """Why a likelihood ratio by a rate that holds the logs of levels would miss something: cash dividends still to come
+    are part of a level that is compared, and their value moves meanwhile; so do the shares that a blend makes of them,
+    which an extreme that is watched up to the ex date looks at. '' where they are not."""
     moved: set[int] = set()
     for number, step in enumerate(tape.instructions):
         kinds = (*ESCROWS, LeafKind.JUMP) if blended else ESCROWS
@@ -161,6 +164,12 @@ def dividends_compared(tape: Tape, known: Sequence[float | None], blended: bool 
             return (f"cash dividends still to come are part of a level that is compared at {step.place}, and a move of "
                     f"rates moves their value")
     return ""
+
+
+def in_extremes(tape: Tape, blended: bool) -> bool:
+    """Whether dividends are part of an extreme that is watched continuously, whose law given levels then moves too."""
+    kinds = (LeafKind.MEAN_ESCROW, LeafKind.JUMP) if blended else (LeafKind.MEAN_ESCROW,)
+    return any(leaf.kind in kinds for leaf in tape.leaves)
 
 
 def second_order_trouble(tape: Tape, made: DerivativeTape, blended: bool = False) -> str:

@@ -125,8 +125,7 @@ def test_quanto_and_composite(tmp_path: Path):
 
 
 def test_a_jump_that_looks_at_dividends_to_come(tmp_path: Path):
-    """The delta holds against the closed form; by the rate, which moves the dividends' value under the held draws, the
-    likelihood ratio is refused with the line."""
+    """Delta, and rho, which moves the dividends' value under the level that is compared: against the closed form."""
     text = EARLY + HEAD + "payoff: early\nterms: {first: 0.5y, last: 1y}\n" + market(
         "currency: EUR, dividends: [{ex: 0.75y, cash: 20}], vol: 20%")
     found, result = greeks(tmp_path, text)
@@ -134,7 +133,18 @@ def test_a_jump_that_looks_at_dividends_to_come(tmp_path: Path):
     d2 = (log(left / strike) + 0.02) / deviation - deviation / 2
     density = exp(-d2 * d2 / 2) / sqrt(2 * 3.141592653589793)
     near(found["delta", "harbour"], 100 * exp(-0.02) * density / (left * deviation) + 1)
-    assert ("rho", "EUR") not in found
+    moved = (15 * exp(-0.03) / left - 5 * exp(-0.01) / strike + 0.5) / deviation
+    near(found["rho", "EUR"], 1e-4 * (100 * exp(-0.02) * (density * moved - 0.5 * ndtr(d2)) + 15 * exp(-0.03)))
+    assert [each.name for each in result.refused] == []
+
+
+def test_an_extreme_that_looks_at_dividends_to_come(tmp_path: Path):
+    """Watched continuously, the law of the extreme given levels moves with the dividends' value: refused, with the
+    line."""
+    terms = ("payoff: barrier\nterms: {side: call, direction: down, knock: out, strike: 95, barrier: 70, "
+             "watched: {continuous: [0y, 1y]}, expiry: 1y}\n")
+    found, result = greeks(tmp_path, HEAD + terms + market("currency: EUR, dividends: [{ex: 0.6y, cash: 8}], vol: 20%"))
+    assert ("rho", "EUR") not in found and ("vega", "harbour") in found
     refused = {(each.name, each.asset): each.reason for each in result.refused}
     assert "cash dividends still to come are part of a level that is compared at" in refused["rho", "EUR"]
 
