@@ -134,8 +134,12 @@ def test_a_jump_that_looks_at_dividends_to_come(tmp_path: Path):
     density = exp(-d2 * d2 / 2) / sqrt(2 * 3.141592653589793)
     near(found["delta", "harbour"], 100 * exp(-0.02) * density / (left * deviation) + 1)
     moved = (15 * exp(-0.03) / left - 5 * exp(-0.01) / strike + 0.5) / deviation
-    near(found["rho", "EUR"], 1e-4 * (100 * exp(-0.02) * (density * moved - 0.5 * ndtr(d2)) + 15 * exp(-0.03)))
+    rho = 1e-4 * (100 * exp(-0.02) * (density * moved - 0.5 * ndtr(d2)) + 15 * exp(-0.03))
+    near(found["rho", "EUR"], rho)
     assert [each.name for each in result.refused] == []
+    scored = greeks(tmp_path, text, estimator="likelihood")[0]["rho", "EUR"]
+    assert scored.estimator == "likelihood ratio", "of the level after the dividend too: both steps about the escrow"
+    assert abs(scored.value - rho) < 4 * scored.standard_error < 0.1 * rho
 
 
 def test_an_extreme_that_looks_at_dividends_to_come(tmp_path: Path):
