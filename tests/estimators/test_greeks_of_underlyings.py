@@ -74,6 +74,17 @@ def test_gamma_under_cash_dividends(tmp_path: Path, estimator: str):
     near(found["gamma", "harbour"], 0.01 * 100 * exp(-0.04) * by_vol / (left * left * 0.2))
 
 
+def test_theta_under_cash_dividends(tmp_path: Path):
+    """A day on the ex date is a day nearer, as expiry is: the dividend is worth more today, the call less."""
+    found, _ = greeks(tmp_path, HEAD + CALL + market("currency: EUR, dividends: [{ex: 0.5y, cash: 20}], vol: 20%"))
+
+    def value(passed: float) -> float:
+        left, time = 100 - 20 * exp(-0.04 * (0.5 - passed)), 1.0 - passed
+        return exp(-0.04 * time) * black(left * exp(0.04 * time), 0.2, time)[0]
+
+    near(found["theta", ""], value(1 / 365) - value(0.0))
+
+
 def test_no_gamma_where_dividends_are_blended(tmp_path: Path):
     """A share made of cash hangs on the forward, so on the spot."""
     blend = "currency: EUR, dividends: [{ex: 0.5y, cash: 20}], dividend_blend: {cash_until: 0.1y, share_from: 0.8y}"
