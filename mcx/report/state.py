@@ -72,7 +72,7 @@ def state_view(dated: DatedContract, state: State, market: MarketMap) -> StateVi
     return StateView(
         valuation=str(Day(0.0, dated.valuation)),
         fixings=tuple(_fixings(dated, state)),
-        past=tuple(PastLine(str(each.day), event_label(each.event, contract.payoff), _held(each.held))
+        past=tuple(PastLine(str(each.day), event_label(each.event), _held(each.held))
                    for each in state.events if each.event.condition is not None or each.event.name),
         paid=tuple(Payment(str(each.due), each.pay.leg, each.amount, each.amount * contract.size) for each in paid),
         owed=owed_amounts(dated, state, market),
