@@ -25,7 +25,8 @@ if TYPE_CHECKING:
     from mcx.estimators.plan import Precision
     from mcx.estimators.price import Ready
     from mcx.report.greek_results import GreeksResult, GreeksTable
-    from mcx.report.results import CalendarView, Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay
+    from mcx.report.results import Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay
+    from mcx.report.state_results import CalendarView
 
 File = str | Path
 Progress = Callable[[int, int, float], None]  # paths done, paths planned, standard error so far (unit of the price)

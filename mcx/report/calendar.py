@@ -6,8 +6,8 @@ from collections.abc import Iterable, Iterator
 
 from mcx.dates.dated_contract import DatedContract, Day, Moment
 from mcx.report.events import event_label
-from mcx.report.results import CalendarLine, CalendarView
 from mcx.report.settled import Settled, right_sides
+from mcx.report.state_results import CalendarLine, CalendarView
 from mcx.report.wording import joined
 from mcx.tape.state import State
 

@@ -138,8 +138,8 @@ class Watched:
         ends = (at.name,) if isinstance(at, At) else (at.start.name, at.end.name)
         placed = [self.formulas.contract.terms[name].place for name in ends if name in self.formulas.contract.terms]
         raise Unreadable(placed[0] if placed else running.place, (
-            f"'{running.name}' is watched all the time from {self.watch.start}, which fixings cannot tell; the contract "
-            f"must say what had happened by {self._needed(day)} or {day}, as 'happened: {{{running.name}: {{{day}: "
+            f"'{running.name}' is watched all the time from {self.watch.start}, which fixings cannot tell; the "
+            f"contract must say what had happened by {self._needed(day)} or {day}, as 'happened: {{{running.name}: {{{day}: "
             f"{what}}}}}'"))
 
     def _needed(self, day: Day) -> datetime.date:
