@@ -287,3 +287,17 @@ def test_locked_returns_of_a_cliquet():
         "max(returns, 0)", f"max(returns + ({locked!r}), 0)") + head.replace("start: 2026-12-01", f"start: {today}") + (
         "payoff: fresh\nterms: {resets: [2027-09-01]}\n---\n")
     assert exact(old + market(today, 96.0, HISTORY)) == pytest.approx(exact(new + market(today, 96.0)), rel=1e-12)
+
+
+@pytest.mark.parametrize(("day", "owed"), [(date(2027, 6, 3), 102.5), (date(2027, 7, 1), 0.0)])
+def test_sensitivities_of_a_note_that_was_called(tmp_path, day: date, owed: float):
+    """What is owed hangs on rates and funding alone; what is worth nothing on nothing."""
+    history = {"2027-03-01": 95.0, "2027-06-01": 104.0}
+    found = lines(tmp_path, AUTOCALL + market(day, 77.0, history))
+    due = (date(2027, 6, 8) - day).days / 365
+    by_rate = -1e-4 * due * owed * exp(-(RATE + SPREAD) * due)
+    for key, value in found.items():
+        truth = by_rate if key[0] in ("rho", "funding") else 0.0
+        if key[0] != "theta":
+            assert value.value == pytest.approx(truth, rel=1e-9, abs=1e-12), key
+    assert ("delta", "harbour", "") in found

@@ -30,8 +30,8 @@ STEP = 1e-40  # of the complex step: no digit of the real part can feel it
 @dataclass(frozen=True, slots=True)
 class Input:
     """A number of the market document. `kind` is spot, vol, rate, funding, yield, forward or correlation; dividend
-    (cash), dividend share, decrement or decrement points; fx spot, fx vol or fx correlation (of a quanto). `subject` is the
-    asset, the pair as written ('harbour/quarry'), the rate of exchange or the currency; `tenor` the node or ex date as
+    (cash), dividend share, decrement or decrement points; fx spot, fx vol or fx correlation (of a quanto). `subject` is
+    the asset, the pair as written ('harbour/quarry'), the rate of exchange or the currency; `tenor` the node or ex date as
     written, '' for a flat number."""
 
     kind: str

@@ -98,7 +98,8 @@ def _fixings(fixings: tuple[Fixed, ...], page: Page) -> None:
     levels = {(each.date, each.asset): f"{each.level:.10g}" for each in fixings}
     left = f" (the last {LATEST} of {len(dates)} dates; all of them: --json)" if len(dates) > LATEST else ""
     page.heading(f"fixings used, as they count{left}")
-    page.table(("date", *names), ([date, *(levels.get((date, name), "") for name in names)] for date in dates[-LATEST:]))
+    page.table(("date", *names), (
+        [date, *(levels.get((date, name), "") for name in names)] for date in dates[-LATEST:]))
 
 
 def show_calendar(result: CalendarView, page: Page) -> None:

@@ -130,9 +130,9 @@ class PriceResult(Result):
     `notional` or `units` is None. `valuation` is None for textbook markets. `ends` holds how often the contract ended
     early on each date, `reached_maturity` how often it did not, and `expected_life` the years to the payment that ends
     it. `owed` are amounts that fixings have settled and that are not yet paid; they are part of the price, which is
-    dirty: `accrued` is the interest of certain coupons in their running period, and `clean` the price less that. `ended` is the
-    date on which the contract has ended already, '' where it lives. `warnings` are about this run, `assumptions` what was taken as given, `limits` what the model leaves out,
-    `cautions` how the number may be used.
+    dirty: `accrued` is the interest of certain coupons in their running period, and `clean` the price less that.
+    `ended` is the date on which the contract has ended already, '' where it lives. `warnings` are about this run,
+    `assumptions` what was taken as given, `limits` what the model leaves out, `cautions` how the number may be used.
     """
 
     contract: str

@@ -139,8 +139,8 @@ class Watched:
         placed = [self.formulas.contract.terms[name].place for name in ends if name in self.formulas.contract.terms]
         raise Unreadable(placed[0] if placed else running.place, (
             f"'{running.name}' is watched all the time from {self.watch.start}, which fixings cannot tell; the "
-            f"contract must say what had happened by {self._needed(day)} or {day}, as 'happened: {{{running.name}: {{{day}: "
-            f"{what}}}}}'"))
+            f"contract must say what had happened by {self._needed(day)} or {day}, as 'happened: "
+            f"{{{running.name}: {{{day}: {what}}}}}'"))
 
     def _needed(self, day: Day) -> datetime.date:
         """The earliest date of a statement that holds on a day: the day itself, or before the close of the valuation
