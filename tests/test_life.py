@@ -301,3 +301,35 @@ def test_sensitivities_of_a_note_that_was_called(tmp_path, day: date, owed: floa
         if key[0] != "theta":
             assert value.value == pytest.approx(truth, rel=1e-9, abs=1e-12), key
     assert ("delta", "harbour", "") in found
+
+
+ABROAD = {
+    "quanto": "dividends: [{ex: 2027-11-10, cash: 2.5}, {ex: 2028-05-10, cash: 2.5}], "
+              "quanto: {fx_vol: 9%, fx_correlation: -20%, fx: EUR per USD}",
+    "composite": "dividends: [{ex: 2027-11-10, cash: 2.5}, {ex: 2028-05-10, share: 2%}]",
+}
+
+
+@pytest.mark.parametrize("how", ABROAD)
+def test_history_under_cash_dividends_and_other_currencies(tmp_path, how: str):
+    """Price and sensitivities are those of the new contract with its state there as well. With a rate of exchange of 1
+    on every past day a composite level has the same history."""
+    today = date(2027, 10, 4)
+
+    def abroad(text: str) -> str:
+        text = text.replace(f"currency: EUR, yield: {YIELD:.4%}", f"currency: USD, {ABROAD[how]}")
+        text = text.replace(f"rates: {{EUR: {RATE:.4%}}}", f"rates: {{EUR: {RATE:.4%}, USD: 4%}}")
+        if how == "composite":
+            rates = ", ".join(f"{day}: 1" for day in HISTORY)
+            text = text.replace("payoff: autocall", "conversion: {harbour: composite}\npayoff: autocall").replace(
+                "payoff: by_hand\nterms:\n  observations: [", "conversion: {harbour: composite}\npayoff: by_hand\nterms:\n"
+                "  observations: [").replace("fixings: {", f"fixings: {{EUR per USD: {{{rates}}}, ")
+            text += "fx: {EUR per USD: {spot: 1.02, vol: 8%}}\ncorrelation: {harbour/EUR per USD: 30%}\n"
+        return text
+
+    old, new = abroad(AUTOCALL + market(today, 93.0, HISTORY)), abroad(by_hand(today, HISTORY) + market(today, 93.0))
+    assert exact(old) == pytest.approx(exact(new), rel=1e-12)
+    found, other = lines(tmp_path, old), lines(tmp_path, new)
+    assert found.keys() == other.keys() and len(found) > 5
+    for key, each in found.items():
+        assert each.value == pytest.approx(other[key].value, rel=1e-9, abs=1e-12), key
