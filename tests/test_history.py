@@ -460,3 +460,20 @@ def test_what_changes_nothing_is_refused(tmp_path: Path, stated: str, said: str)
     """A statement that nothing reads is a slip."""
     found = faults(tmp_path, WORST_OF.replace("payoff:", f"{stated}\npayoff:", 1) + market() + fixings(LEVELS))
     assert len(found) == 1 and said in found[0], found
+
+
+def test_what_must_be_stated_and_what_must_be_fixed_is_told_at_once(tmp_path: Path):
+    """A payment that hangs on a watch does not hide the fixings that it needs as well; of a watch that is read on
+    several past days the last one is named."""
+    text = ("payoff: both\nterms: {watched: {type: watch}, seen: {type: dates}}\nrunning:\n  hit: {ever: spot < 80, at: "
+            "watched}\nevents:\n  - {at: seen, if: hit, then: [pay: spot]}\n  - {at: seen.last, pay: spot}\n---\n"
+            + touch("").replace("payoff: touch", "payoff: both"))
+    start = text.index("terms: {kind")
+    text = (text[:start] + "terms: {watched: {continuous: [2026-12-01, 2027-12-01]}, seen: [2027-03-01, 2027-05-03, "
+            "2027-12-01]}\n" + text[text.index("---\nmarket"):]).replace("settlement: 0", "settlement: 250")
+    found = faults(tmp_path, text.replace("if: hit, then: [pay: spot]", "if: hit or spot < 85, then: [pay: spot]"))
+    assert len(found) == 2
+    assert any("needs a fixing of 'harbour' on 2027-03-01 and 2027-05-03" in each for each in found)
+    assert any("must say what had happened by 2027-05-31 or 2027-06-01" in each for each in found)
+    path = written(tmp_path, "harbour: {2027-03-01: 90, 2027-05-03: 88, 2027-12-01: 95}\n", "path.yaml")
+    refused(mcx("readback", written(tmp_path, text), "--path", path), "must say what had happened by 2027-05-31")

@@ -73,7 +73,8 @@ def unroll(dated: DatedContract, *, nodes: Sequence[float], makeup: Makeup = PLA
     walk.run()
     observed = drop_dead_code(walk.builder.tape(walk.ledger.outputs()))
     missing = [] if given else walk.observations.missing(observed)
-    faults = [*(walk.faults or conflicts(observed) or _unknown_laws(observed, makeup)), *missing]
+    wrong = walk.faults or conflicts(observed) or _unknown_laws(observed, makeup)
+    faults = [*wrong, *walk.observations.unstated.values(), *missing]
     if faults:
         return Unrolled(Tape((), ()), Tape((), ()), Grid((0.0,), ()), {}, (), State(), tuple(sorted(set(faults))))
     if given:
