@@ -279,7 +279,8 @@ def test_locked_returns_of_a_cliquet():
     """Returns of the past are locked by fixings: the same with the levels written into one payment."""
     head = AUTOCALL.split("payoff:")[0].replace("note", "c")
     own = ("payoff: locked\nterms: {resets: {type: dates}}\nrunning:\n  returns:\n    total: \"clip(spot / "
-           "previous(spot, 100) - 1, -2%, 3%)\"\n    at: resets\nevents:\n  - {at: resets.last, pay: \"max(returns, 0)\"}\n---\n")
+           "previous(spot, 100) - 1, -2%, 3%)\"\n    at: resets\nevents:\n  - {at: resets.last, pay: \"max(returns, "
+           "0)\"}\n---\n")
     old = own + head + "payoff: locked\nterms: {resets: [2027-03-01, 2027-06-01, 2027-09-01]}\n---\n"
     today = date(2027, 7, 1)
     locked = sum(min(max(each, -0.02), 0.03) for each in (88.4 / 100 - 1, 97.2 / 88.4 - 1))
@@ -322,8 +323,8 @@ def test_history_under_cash_dividends_and_other_currencies(tmp_path, how: str):
         if how == "composite":
             rates = ", ".join(f"{day}: 1" for day in HISTORY)
             text = text.replace("payoff: autocall", "conversion: {harbour: composite}\npayoff: autocall").replace(
-                "payoff: by_hand\nterms:\n  observations: [", "conversion: {harbour: composite}\npayoff: by_hand\nterms:\n"
-                "  observations: [").replace("fixings: {", f"fixings: {{EUR per USD: {{{rates}}}, ")
+                "payoff: by_hand\nterms:\n  observations: [", "conversion: {harbour: composite}\npayoff: by_hand\n"
+                "terms:\n  observations: [").replace("fixings: {", f"fixings: {{EUR per USD: {{{rates}}}, ")
             text += "fx: {EUR per USD: {spot: 1.02, vol: 8%}}\ncorrelation: {harbour/EUR per USD: 30%}\n"
         return text
 

@@ -104,8 +104,8 @@ class Watched:
         return self.formulas.read(self.watch.running.formula, scene)
 
     def _past_or_fault(self, day: Day) -> float:
-        """What is known of the past; where that is too little, the fault is noted and the walk goes on, so that all that
-        is missing is found at once."""
+        """What is known of the past; where that is too little, the fault is noted and the walk goes on, so that all
+        that is missing is found at once."""
         try:
             return self._past(day)
         except Unreadable as trouble:
