@@ -26,7 +26,8 @@ if TYPE_CHECKING:
     from mcx.estimators.ready import Ready
     from mcx.report.greek_results import GreeksResult, GreeksTable
     from mcx.report.method_results import MethodsResult, MethodsTable
-    from mcx.report.results import CalendarView, Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay
+    from mcx.report.results import Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay
+    from mcx.report.state_results import CalendarView
     from mcx.report.verify_results import VerifyResult, VerifyTable
 
 File = str | Path

@@ -155,8 +155,8 @@ class _Dating:
         for name, dates in self.contract.happened.items():
             for known in dates.values():
                 if name not in watched:
-                    self._fault(known.place, f"'{name}' is not watched all the time in this contract: what happened follows "
-                                             "from its fixings")
+                    self._fault(known.place, f"'{name}' is not watched all the time in this contract: what happened "
+                                             "follows from its fixings")
 
     def _can_be_read(self) -> bool:
         """Whether all that decides which formulas are read is known: every term but numbers that must be stated."""

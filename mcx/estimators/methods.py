@@ -31,6 +31,7 @@ ESCROWS = (LeafKind.ESCROW, LeafKind.MEAN_ESCROW)
 ESCROWED_BY = ("rate", "yield", "forward", "dividend", "dividend share", "decrement points")  # what the escrow hangs on
 COMPARED = (Op.LT, Op.LE, Op.EQ, Op.NE)
 SINGULAR = 1e-14  # an own variance below this share of the whole
+NOTHING_DRAWN = "nothing is simulated: all that it pays is known"
 MOST_DRAWS = 64  # where every payment is smooth; the variance of a likelihood ratio grows with the steps
 
 
@@ -82,7 +83,7 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
     places = tuple({(jump.kind, jump.place): jump for payment in jumping for jump in found[payment]}.values())
     leaf_values = dict(zip(tape.leaves, values, strict=True))
     simulated = (*contract.assets, *simulated_rates(contract.conversion, contract.currency, market))
-    still = without_own_randomness(leaf_values, simulated)
+    still = without_own_randomness(leaf_values, simulated) if tape.normals + tape.uniforms else NOTHING_DRAWN
 
     blended = any(market.assets[name].blend for name in contract.assets)
 
@@ -128,8 +129,8 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
 
 
 def without_own_randomness(values: dict[Leaf, float], names: Sequence[str]) -> str:
-    """Why the paths have no density: an asset or a rate of exchange (by `names`) that does not move by itself, or as good
-    as not; '' where all do."""
+    """Why the paths have no density: an asset or a rate of exchange (by `names`) that does not move by itself, or as
+    good as not; '' where all do."""
     variances: dict[tuple[int, float], float] = {}
     for leaf, value in values.items():
         if leaf.kind is LeafKind.FACTOR:

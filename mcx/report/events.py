@@ -99,8 +99,8 @@ def _delivering(action: Deliver, event: Event, dated: DatedContract, words: Word
     leg = f" as '{action.leg}'" if action.leg != "payment" else ""
     which = "" if action.which is None else f" of each asset of which {words.formula(settled.formula(action.which))}"
     unit = "for each unit" if dated.contract.notional is None else "for each unit of the notional"
-    return (f"delivers {words.formula(settled.formula(action.amount))} shares {unit}{which}{leg}, worth their level then, "
-            f"fractions in cash, {_due(action, event, dated)}")
+    return (f"delivers {words.formula(settled.formula(action.amount))} shares {unit}{which}{leg}, worth their level "
+            f"then, fractions in cash, {_due(action, event, dated)}")
 
 
 def _amount(amount: Formula, dated: DatedContract, words: Words) -> str:
