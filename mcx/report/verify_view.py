@@ -34,6 +34,7 @@ def show_verification(result: VerifyResult, page: Page) -> None:
     places = scale.places(result.standard_error)
     quote, gap = result.quote, result.gap
     page.line(result.verdict, style="bold")
+    page.items(result.leads)
     page.named((
         ("contract", f"{result.contract} ({result.payoff})"),
         ("quote", f"{quote.dealer}, {quote.at}, {quote.side}, {quote.accrual}, {quote.commitment}"),
