@@ -125,7 +125,7 @@ def test_a_hidden_reading_is_found(name: str):
 @pytest.mark.parametrize("name", CONTRACTS)
 def test_false_alarms(name: str):
     """Of 200 quotes at our own value on inputs drawn from their stated doubt about 90 % are inside the input band."""
-    ours = bench_of(*read(name), paths=1 << 13, uncertainty=DOUBT)
+    ours = bench_of(*read(name), paths=1 << 12, uncertainty=DOUBT)
     here = ours.at({})
     band = root_of_squares(here.effects)
     draws = np.random.default_rng(7).standard_normal((200, len(here.effects))) / 1.6448536269514722  # 90 % within ±1
@@ -174,13 +174,13 @@ def test_implied_vol_against_the_closed_form():
     price = european("call", vol=0.24, **AT)
     truth = brentq(lambda vol: european("call", vol=vol, **AT) - price, 0.01, 1.0, xtol=1e-14)
     distances = []
-    for seed in range(100):
+    for seed in range(60):
         ours = bench_of(request_of(CALL.replace("VOL", "21%")), paths=1 << 12, seed=seed)
         found = ours.at({}).implied(vol_lever(ours), price).solutions.found
         distances.append((0.21 + found[0].move - truth) / found[0].error)
     assert max(map(abs, distances)) < 4.0
     inside = sum(abs(distance) < 1.96 for distance in distances)
-    assert abs(inside - 95) <= 4.0 * math.sqrt(100 * 0.95 * 0.05), inside
+    assert abs(inside - 57) <= 4.0 * math.sqrt(60 * 0.95 * 0.05), inside
 
 
 TWO_WAYS = """contract: Knock-in far below, call far above
@@ -242,18 +242,16 @@ def test_two_solutions_between_two_points_of_the_scan():
     assert [each.move for each in found] == pytest.approx([0.511, 0.513], abs=1e-8)
 
 
-def test_the_smallest_joint_move_meets_the_quote():
+@pytest.mark.parametrize("name", ["reverse convertible", "asian"])
+def test_the_smallest_joint_move_meets_the_quote(name: str):
     """It is no further than the cheapest single input that has a stated width, and fresh numbers confirm it."""
-    for name in CONTRACTS:
-        ours = bench(name)
-        here = ours.at({})
-        meets = here.price.value - 0.8 * root_of_squares(here.effects)
-        joint = here.joint(meets)
-        single = [abs(each.move) / implied.lever.width for implied in (here.implied(lever, meets) for lever in levers_of(name)
-                                                                       if lever.subject != "all")
-                  for each in implied.solutions.found]
-        assert joint.size == pytest.approx(0.8, rel=0.1)
-        assert joint.size < min(single) and abs(joint.z) < 4.0
+    here = bench(name).at({})
+    meets = here.price.value - 0.8 * root_of_squares(here.effects)
+    joint = here.joint(meets)
+    alone = (here.implied(lever, meets) for lever in levers_of(name) if lever.subject != "all")
+    single = [abs(each.move) / implied.lever.width for implied in alone for each in implied.solutions.found]
+    assert joint.size == pytest.approx(0.8, rel=0.1)
+    assert joint.size < min(single) and abs(joint.z) < 4.0
 
 
 def test_a_term_is_solved():
