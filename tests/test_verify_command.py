@@ -63,6 +63,16 @@ def test_the_demo_is_explained_by_a_reading():
     assert found["leads"][0].startswith("Read otherwise it would be closed: knock-in at each close")
 
 
+def test_the_page_in_the_readme_is_the_one_that_is_printed():
+    """Line by line, in its order."""
+    readme = (EXAMPLES.parents[1] / "README.md").read_text(encoding="utf-8")
+    shown = readme.split("verify payoffs/examples/quoted_note.yaml\n```\n\n```\n", 1)[1].split("\n```", 1)[0].splitlines()
+    printed = iter(mcx("verify", NOTE).out.splitlines())
+    assert len(shown) > 15
+    for line in shown:
+        assert line == "…" or line in printed, line
+
+
 def test_the_terminal_says_what_a_reader_needs():
     """The verdict first, every part of the page, within 80 columns."""
     outcome = mcx("verify", NOTE, *ASKED, "--solve", "coupon")
