@@ -8,14 +8,13 @@ after the documents are known to be sound.
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Iterable, Iterator, Sequence
-from contextlib import contextmanager
+from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from mcx.checked.load import Request, checked_request
 from mcx.dates.dated_contract import DatedContract
-from mcx.dates.dating import date_contract
+from mcx.dates.dating import date_on
 from mcx.faults import Fault, InputError, Place, Refusal, RequestError, did_you_mean
 from mcx.text.documents import read_documents
 from mcx.text.located import Document
@@ -26,8 +25,8 @@ if TYPE_CHECKING:
     from mcx.estimators.plan import Precision
     from mcx.estimators.price import Ready
     from mcx.report.greek_results import GreeksResult, GreeksTable
+    from mcx.report.results import CalendarView, Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay
     from mcx.report.verify_results import VerifyResult, VerifyTable
-    from mcx.report.results import Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay
 
 File = str | Path
 Progress = Callable[[int, int, float], None]  # paths done, paths planned, standard error so far (unit of the price)
@@ -55,7 +54,7 @@ def price(
     At most one of `paths`, `within` (a 95 % half-width: '2bp' or '0.02%' of the notional, '0.01' money per unit) and
     `seconds` decides the number of paths; without any it is 2^20. `seed` None is 1. `threads` None takes all; it
     changes no digit. `record` names a file to write a valuation record to. `notice` is called with a sentence when
-    kernels must be compiled. Raises InputError, RequestError, Refusal.
+    kernels must be compiled, or a run will take long. Raises InputError, RequestError, Refusal.
     """
     from mcx.estimators.plan import DEFAULT_SEED, check_fits, precision
 
@@ -123,8 +122,9 @@ def greeks(
         for name in wish.assets:
             if name not in each.assets:
                 raise RequestError(f"'{each.title}' has no asset '{name}'{did_you_mean(name, each.assets)}")
-    table = _greeks(made, dated, [wish] * len(dated), [asked] * len(dated), [seed] * len(dated), threads, progress, notice)
-    if record is not None:
+    count = len(dated)
+    table = _greeks(made, dated, [wish] * count, [asked] * count, [seed] * count, threads, progress, notice)
+    if record is not None and not table.interrupted:
         from mcx.report.record import make_record, write_record
 
         write_record(record, make_record(_sources(made), [each.to_dict() for each in table.contracts], "greeks"))
@@ -183,21 +183,29 @@ def verify(
     return verify_table(results)
 
 
-def readback(*files: File, path: File | None = None) -> Readback | ReadbackTable:
-    """What every contract in the files says, in sentences and dates; with a market also what that says on the dates.
+def readback(*files: File, path: File | None = None, calendar: bool = False) -> Readback | ReadbackTable | CalendarView:
+    """What every contract in the files says, in sentences and dates; with a market also what that says on the dates,
+    and what has become of the contract by its valuation date.
 
     `path` names a file of levels (YAML by asset and date, or CSV) that is run through the one contract in the files.
+    `calendar` gives in place of all that one list of the fixings, decisions and payments to come of all contracts.
     Raises InputError, RequestError.
     """
     from mcx.report.readback import readback as read_back
     from mcx.report.results import ReadbackTable
 
     made, dated = _dated(files, with_market=False)
+    if path is not None and calendar:
+        raise RequestError("levels are run through one contract; a calendar lists what comes next of all")
     if path is not None and len(dated) > 1:
         raise RequestError(f"levels can be run through one contract at a time; the files hold {len(dated)}")
     if made.market is not None:
         _check_dividends(made.market, dated)
     given = None if path is None else _on_levels(dated[0], path)
+    if path is None and made.market is not None:
+        _check_fixings(dated)
+    if calendar:
+        return _calendar(made, dated)
     found = tuple(read_back(each, made.market, given) for each in dated)
     return found[0] if len(found) == 1 else ReadbackTable(found)
 
@@ -269,14 +277,19 @@ def replay(
     elif verb == "greeks":
         from mcx.estimators.wishes import wish_of
 
-        wishes = [wish_of(*(each[key] for key in ("estimator", "bump", "assets", "spot_moves", "vol_moves"))) for each in runs]
-        results = _greeks(made, dated, wishes, asked, seeds, threads, progress, notice).contracts
+        keys = ("estimator", "bump", "assets", "spot_moves", "vol_moves")
+        wishes = [wish_of(*(each[key] for key in keys)) for each in runs]
+        results = _whole(_greeks(made, dated, wishes, asked, seeds, threads, progress, notice)).contracts
     else:
-        table = _price(made, dated, asked, seeds, threads, progress, notice)
-        if table.interrupted:
-            raise KeyboardInterrupt
-        results = table.prices
+        results = _whole(_price(made, dated, asked, seeds, threads, progress, notice)).prices
     return compare(stored, [each.to_dict() for each in results], environment())
+
+
+def _whole(table):
+    """A table of results, if nothing interrupted it; raises KeyboardInterrupt."""
+    if table.interrupted:
+        raise KeyboardInterrupt
+    return table
 
 
 def _dated(files: Sequence[File], *, with_market: bool, with_quote: bool = False) -> tuple[Request, list[DatedContract]]:
@@ -298,23 +311,43 @@ def _all_dated(made: Request, faults: Iterable[Fault]) -> list[DatedContract]:
     """Every contract of a request with its dates; raises InputError with all faults."""
     faults, dated = list(faults), []
     for contract in made.contracts:
-        found, wrong = date_contract(contract, made.market.valuation if made.market else None)
+        found, wrong = date_on(contract, made.market)
         faults += wrong
         if found is not None:
             dated.append(found)
     if faults:
-        raise InputError([*faults, *_watches_refused(dated)])
+        raise InputError([*faults, *_refused(dated)])
     return dated
 
 
-def _watches_refused(dated: Iterable[DatedContract]) -> list[Fault]:
-    """The continuous watches that cannot be simulated, so that they are told beside the faults of the documents."""
-    watched = [each for each in dated if each.watches]
+def _refused(dated: Iterable[DatedContract]) -> list[Fault]:
+    """Continuous watches that cannot be simulated and fixings that are missing, so that they are told beside the faults
+    of the documents."""
+    watched = [each for each in dated if each.watches or each.begun]
     if not watched:
         return []
     from mcx.tape.unroll import unroll
 
-    return [fault for each in watched for fault in unroll(each, nodes=()).faults]
+    return [fault for each in watched for fault in unroll(each, nodes=()).faults
+            if each.history.sound or fault.place != each.history.place]  # what was misspelt is not missing as well
+
+
+def _check_fixings(dated: Iterable[DatedContract]) -> None:
+    """Raises InputError with every fixing that is missing. What else the tape refuses, the readback says."""
+    from mcx.tape.unroll import unroll
+
+    faults = [fault for each in dated if each.begun for fault in unroll(each, nodes=()).faults]
+    if faults:
+        raise InputError(faults)
+
+
+def _calendar(made: Request, dated: Sequence[DatedContract]) -> CalendarView:
+    """What comes next of every contract; what is known of the past needs a market."""
+    from mcx.report.calendar import calendar
+    from mcx.tape.unroll import unroll
+
+    states = [unroll(each, nodes=()).state if made.market else None for each in dated]
+    return calendar(zip(dated, states, strict=True))
 
 
 def _check_dividends(market: Market, dated: Iterable[DatedContract]) -> None:
@@ -336,6 +369,7 @@ def _price(
     notice: Callable[[str], None] | None,
 ) -> PriceTable:
     """Every contract valued; after an interruption those so far. Raises KeyboardInterrupt if that is none."""
+    from mcx.estimators.finite import finite
     from mcx.estimators.price import value
     from mcx.report.results import PriceTable
     from mcx.report.summary import price_result
@@ -343,7 +377,7 @@ def _price(
     results = []
     for ready, wish, seed in zip(_ready(made, dated), asked, seeds, strict=True):
         try:
-            with _finite(ready):
+            with finite(ready):
                 valuation = value(ready, wish, seed=seed, threads=threads, progress=progress, notice=notice)
         except KeyboardInterrupt:
             if not results:
@@ -365,18 +399,26 @@ def _greeks(
     progress: Progress | None,
     notice: Callable[[str], None] | None,
 ) -> GreeksTable:
-    """The sensitivities of every contract."""
+    """The sensitivities of every contract; after an interruption those so far."""
+    from mcx.estimators.finite import finite
     from mcx.estimators.greeks import sensitivities
     from mcx.report.greek_results import GreeksTable
     from mcx.report.greek_summary import greeks_result
 
     results = []
     for ready, wish, precision, seed in zip(_ready(made, dated), wishes, asked, seeds, strict=True):
-        with _finite(ready):
-            found = sensitivities(ready, made.market, wish, precision, seed=seed, threads=threads, progress=progress,
-                                  notice=notice)
+        try:
+            with finite(ready):
+                found = sensitivities(ready, made.market, wish, precision, seed=seed, threads=threads,
+                                      progress=progress, notice=notice)
+        except KeyboardInterrupt:
+            if not results:
+                raise
+            break
         results.append(greeks_result(ready, made.market, wish, found))
-    return GreeksTable(tuple(results))
+        if found.interrupted:
+            break
+    return GreeksTable(tuple(results), tuple(each.contract.title for each in dated[len(results):]))
 
 
 def _verify(
@@ -390,6 +432,7 @@ def _verify(
     notice: Callable[[str], None] | None,
 ) -> list[VerifyResult]:
     """Every quote against its contract; the quotes of one contract share its paths."""
+    from mcx.estimators.finite import finite
     from mcx.estimators.verify import Bench
     from mcx.report.verify_summary import verify_result
 
@@ -398,30 +441,13 @@ def _verify(
     results = []
     for quote, wish, precision, seed in zip(made.quotes, wishes, asked, seeds, strict=True):
         key = quote.about, precision, seed
-        with _finite(ready[quote.about]):
+        with finite(ready[quote.about]):
             if key not in benches:
                 benches[key] = Bench(ready[quote.about], made.market, precision, seed=seed, threads=threads,
                                      progress=progress, notice=notice)
             found = benches[key].verify(quote, *wish)
         results.append(verify_result(ready[quote.about], made.market, found, *wish))
     return results
-
-
-@contextmanager
-def _finite(ready: Ready) -> Iterator[None]:
-    """Turns a number that is not finite into a refusal that names the path."""
-    from mcx.machine.run import NonFinitePath, NonFiniteSum
-
-    why = "a formula divides by 0, overflows or leaves the domain of log, sqrt or a power"
-    try:
-        yield
-    except NonFinitePath as trouble:
-        output = ready.unrolled.tape.outputs[trouble.output if trouble.stream == 0 else 0].name
-        raise Refusal(f"'{ready.dated.contract.title}': '{output}' is not a finite number on path {trouble.path} (seed "
-                      f"{trouble.seed}, stream {trouble.stream}); {why}") from None
-    except NonFiniteSum as trouble:
-        raise Refusal(f"'{ready.dated.contract.title}': a derivative is not a finite number on one of the 64 paths from "
-                      f"{trouble.first_path} on (seed {trouble.seed}, stream {trouble.stream}); {why}") from None
 
 
 def _ready(made: Request, dated: Sequence[DatedContract]) -> list[Ready]:
@@ -447,7 +473,7 @@ def _on_levels(dated: DatedContract, path: File):
     except (OSError, ValueError) as error:
         raise RequestError(f"{file}: the levels cannot be read: {getattr(error, 'strerror', None) or error}") from None
     levels, faults = read_levels(data, file, dated)
-    unrolled = unroll(dated, nodes=())
+    unrolled = unroll(dated, nodes=(), given=True)
     faults += unrolled.faults
     if not faults:
         found, faults = run_levels(dated, unrolled.observed, levels, file)

@@ -47,7 +47,8 @@ KNOWN = {
     "geometric average": Known(
         "asian", "side: call; average_type: geometric; strike_type: fixed; strike: 100; "
                  "averaging: {count: 12, until: 1y}",
-        lambda **at: forms.asian_geometric("call", strike=100.0, times=[t - 1.0 + at["maturity"] for t in MONTHS], **at)),
+        lambda **at: forms.asian_geometric(
+            "call", strike=100.0, times=[t - 1.0 + at["maturity"] for t in MONTHS], **at)),
     "barrier": Known(
         "barrier", "side: put; direction: down; knock: in; strike: 100; barrier: 85; watched: {continuous: [0y, 1y]}",
         lambda **at: forms.barrier_option("put", "down", "in", 100.0, 85.0, **at), JUMPING, JUMPING),

@@ -42,8 +42,9 @@ assets:
 
 
 def autocall(spot: float, vol: float, rate: float, dividend_yield: float, funding: float, gone: float = 0.0) -> float:
-    """The price in parts of the notional. Between dates the log of the level is normal; on each date the value is smooth
-    between the levels at which something turns, and is integrated piece by piece. `gone`: years since the start."""
+    """The price in parts of the notional. Between dates the log of the level is normal; on each date the value is
+    smooth between the levels at which something turns, and is integrated piece by piece. `gone`: years since the
+    start."""
     drift = rate - dividend_yield - vol**2 / 2
     reach = 10 * vol * sqrt(TIMES[-1]) + abs(drift) * TIMES[-1]
     nodes = values = None
@@ -51,7 +52,8 @@ def autocall(spot: float, vol: float, rate: float, dividend_yield: float, fundin
         step = TIMES[0] - (gone if number == 0 else 0.0)
         levels = sorted({CALL[number], COUPON_BARRIER, *([KNOCK_IN, 1.0] if number == len(TIMES) - 1 else [])})
         ends = [-reach, *(log(level) for level in levels), reach]
-        cuts = [x for a, b in zip(ends, ends[1:], strict=False) for x in np.linspace(a, b, 2 + int((b - a) / (2.0 * vol)))[:-1]]
+        cuts = [x for a, b in zip(ends, ends[1:], strict=False)
+                for x in np.linspace(a, b, 2 + int((b - a) / (2.0 * vol)))[:-1]]
         cuts.append(reach)
         halves = np.diff(cuts)[:, None] / 2
         here = (np.array(cuts)[:-1, None] + halves * (NODES + 1)).ravel()
@@ -70,7 +72,8 @@ def autocall(spot: float, vol: float, rate: float, dividend_yield: float, fundin
 
 
 def later(x: np.ndarray, nodes: np.ndarray, values: np.ndarray, drift: float, deviation: float) -> np.ndarray:
-    """From each x the expectation of what is worth `values` (times their quadrature weights) at the nodes, a step later."""
+    """From each x the expectation of what is worth `values` (times their quadrature weights) at the nodes, a step
+    later."""
     z = (nodes - x[:, None] - drift) / deviation
     return np.exp(-0.5 * z**2) @ values / (deviation * sqrt(2 * np.pi))
 
@@ -90,7 +93,8 @@ def test_price():
     (("delta", "harbour", ""), "spot", 1.0), (("vega", "harbour", ""), "vol", 0.01), (("rho", "EUR", ""), "rate", 1e-4),
     (("yield", "harbour", ""), "dividend_yield", 1e-4), (("funding", "EUR", ""), "funding", 1e-4)])
 def test_first_order(key: tuple, by: str, unit: float):
-    """The likelihood ratio against sixth-order differences of the recursion; a pathwise delta would be a fifth of it."""
+    """The likelihood ratio against sixth-order differences of the recursion; a pathwise delta would be a fifth of
+    it."""
     check(run()[key], 1e6 * unit * slope(autocall, AT, by, step=4e-3), 0.02)
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import signal
 from pathlib import Path
 
 import pytest
@@ -21,6 +22,17 @@ assets: [harbour]
 payoff: touch
 terms: {kind: one touch, direction: up, barrier: 101, cash: 1, watched: {from: 0y, count: 4, until: 1y}, expiry: 1y}
 """
+FORWARD = """---
+payoff: forward
+about: The level less a strike.
+assets: 1
+terms:
+  strike: {type: level}
+  expiry: {type: date}
+events:
+  - at: expiry
+    pay: spot - strike
+"""
 
 
 @pytest.fixture
@@ -38,8 +50,9 @@ def test_every_greek_says_its_unit_its_error_and_its_estimator(call: Path):
     found = mcx("greeks", call, *ASKED, "--json").json
     assert all(KEYS <= each.keys() for each in found["greeks"])
     units = {key[0]: each["unit"] for key, each in rows(found).items()}
-    assert units == {"delta": "EUR per 1 of spot", "delta for 1 %": "EUR", "vega": "EUR per vol point", "yield": "EUR per bp",
-                     "rho": "EUR per bp", "gamma": "EUR per 1 of spot, for 1 %", "theta": "EUR per calendar day"}
+    assert units == {"delta": "EUR per 1 of spot", "delta for 1 %": "EUR", "vega": "EUR per vol point",
+                     "yield": "EUR per bp", "rho": "EUR per bp", "gamma": "EUR per 1 of spot, for 1 %",
+                     "theta": "EUR per calendar day"}
     assert package.greeks(call, paths=PATHS, seed=SEED).to_dict() | {"seconds": 0} == found | {"seconds": 0}
 
 
@@ -69,8 +82,9 @@ def test_the_terminal_says_what_a_reader_needs(call: Path):
     outcome = mcx("greeks", call, *ASKED, "--bump", "1%", "--ladder", "--spot-moves=-1%,0,1%")
     assert (outcome.code, outcome.err) == (0, "")
     words = " ".join(outcome.out.split())
-    for said in ("delta harbour", "EUR per 1 of spot", "pathwise", "sampling error only", "biased by the size of the move",
-                 "moved by ±1 %", "spots moved together", "forwards move with its spot", "a calendar day on", "no skew",
+    for said in ("delta harbour", "EUR per 1 of spot", "pathwise", "sampling error only",
+                 "biased by the size of the move", "moved by ±1 %", "spots moved together",
+                 "forwards move with its spot", "a calendar day on", "no skew",
                  "licensed professional"):
         assert said in words, said
     assert max(map(len, outcome.out.splitlines())) <= 80
@@ -88,13 +102,12 @@ def test_put_call_parity(tmp_path: Path):
     """Call less put is a forward, in every Greek, on the same paths: the forward's own estimate, to rounding; its gamma
     and vega are nothing."""
     text = CALL + CALL.replace("contract: Call", "---\ncontract: Put").replace("side: call", "side: put")
-    forward = CALL.replace("contract: Call", "---\ncontract: Forward").replace("payoff: european", "payoff: forward").replace(
-        "side: call, ", "") + "---\npayoff: forward\nabout: S less a strike.\nassets: 1\nterms:\n  strike: {type: level}\n" \
-        "  expiry: {type: date}\nevents:\n  - at: expiry\n    pay: spot - strike\n"
+    forward = CALL.replace("contract: Call", "---\ncontract: Forward").replace("european", "forward")
+    forward = forward.replace("side: call, ", "") + FORWARD
     file = written(tmp_path, text + forward + MARKET)
     for estimator in ("pathwise", "likelihood"):
-        call, put, ahead = (rows(each) for each in mcx("greeks", file, "--paths", 1 << 16, "--seed", SEED, "--estimator",
-                                                       estimator, "--json").json["contracts"])
+        outcome = mcx("greeks", file, "--paths", 1 << 16, "--seed", SEED, "--estimator", estimator, "--json")
+        call, put, ahead = map(rows, outcome.json["contracts"])
         for key in call:
             gap = call[key]["value"] - put[key]["value"] - ahead[key]["value"]
             error = sum(each[key]["standard_error"] ** 2 for each in (call, put, ahead)) ** 0.5
@@ -103,10 +116,11 @@ def test_put_call_parity(tmp_path: Path):
 
 def test_a_ladder_is_priced_where_it_stands(call: Path, tmp_path: Path):
     """A rung is the price at that spot on the same paths, with the delta there."""
-    found = mcx("greeks", call, *ASKED, "--ladder", "--spot-moves", "2%,-5%,0", "--json").json["ladder"]
+    asked = (*ASKED, "--estimator", "pathwise")  # the others' coefficients come from the market as it stands
+    found = mcx("greeks", call, *asked, "--ladder", "--spot-moves", "2%,-5%,0", "--json").json["ladder"]
     assert [rung["spot_move"] for rung in found] == [-0.05, 0.0, 0.02]
     moved = written(tmp_path, CALL + MARKET.replace("spot: 100", "spot: 102"), "moved.yaml")
-    there = mcx("greeks", moved, *ASKED, "--json").json
+    there = mcx("greeks", moved, *asked, "--json").json
     assert found[2]["price"] == pytest.approx(there["price"], rel=1e-13)
     assert found[2]["deltas"][0]["value"] == pytest.approx(rows(there)["delta", "harbour", ""]["value"], rel=1e-10)
     assert found[1]["change"] == 0.0 and found[1]["change_standard_error"] == 0.0
@@ -123,6 +137,14 @@ def test_a_ladder_marks_jumps(tmp_path: Path):
     assert marked == [0, 1, 0, 0] and "touch.yaml" in rungs[1]["jumps"][0]
     assert rungs[3]["standard_error"] == 0.0, "touched already"
     assert "jump above" in mcx("greeks", file, *ASKED, "--ladder", "--spot-moves", "-2%,0,2%,4%").out
+
+
+@pytest.mark.parametrize(("barrier", "near"), [(100.5, True), (99.5, True), (103, False)])
+def test_a_condition_that_is_about_to_turn_is_told(tmp_path: Path, barrier: float, near: bool):
+    """Today's level is within 1 % of the barrier: no sensitivity shows the jump, so a warning does."""
+    file = written(tmp_path, TOUCH.replace("barrier: 101", f"barrier: {barrier}") + MARKET)
+    warnings = mcx("greeks", file, *ASKED, "--json").json["warnings"]
+    assert any("touch.yaml" in text and "turns where spots move by 1%" in text for text in warnings) == near
 
 
 def test_a_grid_of_spots_and_vols(call: Path):
@@ -171,6 +193,7 @@ def test_below_twice_its_error_is_not_resolved(tmp_path: Path):
     (("--estimator", ""), "there is no estimator ''"),
     (("--bump", "0"), "'bump' is a size above 0"),
     (("--ladder", "--spot-moves", "-100%"), "stays above 0"),
+    (("--ladder", "--spot-moves", ""), "the spot moves are sizes such as"),
     (("--spot-moves", "1%"), "goes with '--ladder'"),
     (("--ladder", "--vol-moves", "1%"), "'--vol-moves' with '--grid'"),
     (("--paths", "4095"), "at least 4,096 paths"),
@@ -185,7 +208,7 @@ def test_wrong_requests(call: Path, options: tuple, said: str):
 def test_an_estimator_that_is_not_valid_is_refused():
     """With the reason and the line, and nothing on standard output."""
     refused(mcx("greeks", EXAMPLES / "digital.yaml", "--paths", PATHS, "--estimator", "pathwise"),
-            "no pathwise estimate, since the payoff jumps at", "digital.yaml:19:18")
+            "no pathwise estimate, since the payoff jumps at", "digital.yaml:")
 
 
 def test_a_record_reproduces(tmp_path: Path):
@@ -213,6 +236,61 @@ def test_a_changed_record_is_told_by_the_name_of_the_greek(tmp_path: Path, monke
     file.write_text(json.dumps({**stored, "sha256": records._checksum(stored)}), encoding="utf-8")
     found = mcx("replay", file, "--json")
     assert found.code == 1 and found.json["first_difference"].endswith("greeks[vega lantern 3y].value")
+
+
+@pytest.fixture
+def pressed(monkeypatch: pytest.MonkeyPatch):
+    """Ctrl-C once so many batches of 128 paths are done, those of the pilot included."""
+    from mcx.machine.blocks import Crew
+
+    monkeypatch.setattr("mcx.machine.run.batch_for", lambda code, lanes: 128)
+
+    def after(batches: int) -> None:
+        done, run = [0], Crew.run
+
+        def counted(crew, *given):
+            done[0] += 1
+            if done[0] == batches + 1:
+                signal.raise_signal(signal.SIGINT)
+            return run(crew, *given)
+
+        monkeypatch.setattr(Crew, "run", counted)
+
+    return after
+
+
+PILOT = 128  # batches
+
+
+def test_interrupted_with_the_estimates_so_far(call: Path, pressed, tmp_path: Path):
+    """Code 130, the numbers of a run of that length; what had not begun is left out, and no record is written."""
+    short = mcx("greeks", call, "--paths", 40 * 128, "--estimator", "pathwise", "--json").json
+    pressed(PILOT + 40)
+    outcome = mcx("greeks", call, "--paths", 10_000, "--estimator", "pathwise", "--json", "--record",
+                  tmp_path / "r.json")
+    assert outcome.code == 130 and outcome.json["interrupted"] and outcome.json["paths"] == 40 * 128
+    assert outcome.err == "interrupted: no record was written\n" and not (tmp_path / "r.json").exists()
+    assert any("interrupted after 5,120 of 10,000 paths" in warning for warning in outcome.json["warnings"])
+    found, expected = rows(outcome.json), rows(short)
+    assert found.keys() == expected.keys() - {("theta", "", "1 day")}
+    for key, each in found.items():
+        assert each == expected[key]
+
+
+def test_interrupted_among_the_revaluations(call: Path, pressed):
+    """The sensitivities are whole; of what came after only what was done is shown."""
+    pressed(PILOT + 32 + 40)
+    outcome = mcx("greeks", call, "--paths", 4096, "--estimator", "pathwise", "--ladder")
+    assert outcome.code == 130 and outcome.out.startswith("interrupted: the estimates so far\n")
+    assert "theta" in outcome.out and "spots moved together" not in outcome.out
+
+
+@pytest.mark.parametrize("batches", [0, 60, PILOT + 20])
+def test_interrupted_before_anything(call: Path, pressed, batches: int):
+    """In the pilot, or before every part of the run has paths: code 130 and a sentence."""
+    pressed(batches)
+    outcome = mcx("greeks", call, "--paths", 10_000, "--estimator", "pathwise")
+    assert (outcome.code, outcome.out, outcome.err.strip()) == (130, "", "interrupted before there was an estimate")
 
 
 def test_python_takes_texts_and_numbers(call: Path):

@@ -11,6 +11,8 @@ from mcx.checked.formula import Formula
 from mcx.faults import Place
 
 MONEY, MULTIPLES = "money per unit", "multiples of the notional"
+BOND = "bond"  # the part of what an issuer owes in any case
+
 
 @dataclass(frozen=True, slots=True)
 class Term:
@@ -93,6 +95,14 @@ class Pay:
 
 
 @dataclass(frozen=True, slots=True)
+class Deliver(Pay):
+    """Deliver shares: `amount` of each asset for each unit of the notional (or each unit), of the assets for which the
+    flag `which` holds (None: all of them)."""
+
+    which: Formula | None = None
+
+
+@dataclass(frozen=True, slots=True)
 class Assign:
     """`set`: all right sides are read before any is written."""
 
@@ -161,3 +171,8 @@ class Payoff:
 
     def term(self, name: str) -> Term | None:
         return next((term for term in self.terms if term.name == name), None)
+
+    def payments(self) -> tuple[Pay, ...]:
+        """Every payment of its events, in file order."""
+        actions = [action for event in self.events for action in (*event.then, *event.otherwise)]
+        return tuple(action for action in actions if isinstance(action, Pay))

@@ -60,12 +60,12 @@ class Sampling:
     def sums(self, program: Program) -> tuple[Batches, Estimate]:
         """The means of all sums that a program takes, and its first output, the price, with the error of single paths.
 
-        Raises NonFinitePath and NonFiniteSum of `machine.run`, and KeyboardInterrupt where the run was interrupted:
-        parts of a run can be compared with nothing.
+        After an interruption those of the paths so far, fewer than asked for. Raises NonFinitePath and NonFiniteSum of
+        `machine.run`, and KeyboardInterrupt where the interruption came before every part had paths.
         """
         found = run(program, seed=self.seed, paths=self.paths, stream=self.stream, threads=self.threads,
                     progress=self.progress, notice=self.notice)
-        if found.interrupted:
+        if found.interrupted and not found.batch_paths.all():
             raise KeyboardInterrupt
         price = estimates(found.paths, found.mean[:1], found.m2[:1])[0]
         return Batches(found.batch_paths, found.sums / found.batch_paths[:, None]), price
@@ -74,5 +74,5 @@ class Sampling:
 def check_paths(paths: int | None) -> None:
     """Raises RequestError for too few paths to have batches of."""
     if paths is not None and paths < FEWEST_PATHS:
-        raise RequestError(f"sensitivities need at least {FEWEST_PATHS:,} paths, since their errors come from {BATCHES} "
-                           f"parts of the run; asked for were {paths:,}")
+        raise RequestError(f"sensitivities need at least {FEWEST_PATHS:,} paths, since their errors come from "
+                           f"{BATCHES} parts of the run; asked for were {paths:,}")

@@ -1,44 +1,36 @@
 """Derivatives of a price by every number of the market document, from one run of a transformed tape.
 
-The payments of the price are shared out: some are taken pathwise, by the adjoint of the tape (Glasserman 2003, section 7.2;
-Giles & Glasserman 2006), right where a payment has no jumps; the others by likelihood ratio (section 7.3): the payment
-times the score of everything that is drawn, plus the derivative through what is read openly (discount factors) with the
-levels held. A payment is multiplied only by scores of steps up to the last that it depends on, since later ones have mean
-zero given all that it depends on. Scores have mean zero too, so their means are controls, with coefficients from a pilot.
-
-Second derivatives by the spots: of the pathwise part the likelihood ratio of its delta, of the other part the second-order
-score.
+The tape says which sums it takes (`derivative_tape.py`); here a market is put to it, and what comes out becomes
+derivatives: by the leaves through the adjoint of what is the same on every path, by the numbers of the document through
+the Jacobian of the market's map. Scores have mean zero, so their sums are controls; coefficients come from a pilot.
 """
 
 from __future__ import annotations
 
-from collections import Counter
-from collections.abc import Iterable, Sequence
-from dataclasses import dataclass, replace
-from itertools import accumulate, combinations_with_replacement
+from dataclasses import dataclass
 
 import numpy as np
 
 from mcx.checked.contract import Contract
 from mcx.checked.market import Market
 from mcx.estimators.batches import Batches, Sampling
+from mcx.estimators.derivative_tape import DerivativeTape, pairs_of
 from mcx.estimators.estimate import Estimate
-from mcx.leaves.grouped import Grouped, grouped
+from mcx.leaves.grouped import grouped
 from mcx.leaves.jacobian import inputs, jacobian
 from mcx.leaves.market_map import MarketMap
 from mcx.machine.sizes import cost
-from mcx.tape.adjoint import Gradient, finished, leaf_sums, of_the_market, on_paths, sums_of, sweep
-from mcx.tape.builder import Builder
-from mcx.tape.ops import Op
-from mcx.tape.program import Leaf, LeafKind, Program, Sum, Tape, spot_leaf
-from mcx.tape.registers import lower, uniform_values
-from mcx.tape.scores import BRIDGES, Scores, latest_steps, scores
-from mcx.tape.steps import Grid
+from mcx.tape.adjoint import leaf_sums
+from mcx.tape.program import Program
+from mcx.tape.registers import lower
+
+CONTROLS = 6  # of a second derivative: two scores, the second-order one, that of its delta, both deltas' difference,
+# and the difference of both second derivatives of a stand-in
 
 
 @dataclass(frozen=True, slots=True)
 class Coefficients:
-    """Of the controls: first (numbers,), second (pairs, controls)."""
+    """Of the controls: first (numbers, 2), second (pairs, CONTROLS)."""
 
     first: np.ndarray
     second: np.ndarray
@@ -48,9 +40,9 @@ class Coefficients:
 class Derivatives:
     """What one run finds, by parts of the run, without the controls and the controls beside it.
 
-    paths (64,); first and its control (64, numbers): by the inputs in their order; second (64, pairs) and its controls
-    (64, pairs, controls): by the pairs of spots, each asset with itself first; the price of the same paths, by parts
-    (64, 1) and as a whole.
+    paths (64,); first (64, numbers) and its controls (64, numbers, 2): by the inputs in their order; second (64, pairs)
+    and its controls (64, pairs, CONTROLS): by the pairs of spots, each asset with itself first; the price of the same
+    paths, by parts (64, 1) and as a whole.
     """
 
     paths: np.ndarray
@@ -63,13 +55,13 @@ class Derivatives:
 
     def fitted(self) -> Coefficients:
         """Coefficients that leave the smallest variance on these paths."""
-        first = np.array([_fit(self.first[:, k], self.control[:, k : k + 1])[0] for k in range(self.first.shape[1])])
+        first = np.array([_fit(self.first[:, k], self.control[:, k]) for k in range(self.first.shape[1])])
         second = np.array([_fit(self.second[:, k], self.controls[:, k]) for k in range(self.second.shape[1])])
         return Coefficients(first, second.reshape(self.controls.shape[1:]))
 
     def with_controls(self, coefficients: Coefficients) -> tuple[Batches, Batches]:
         """First and second derivatives, as quantities by parts of the run."""
-        first = self.first - coefficients.first * self.control
+        first = self.first - np.einsum("bnc,nc->bn", self.control, coefficients.first)
         second = self.second - np.einsum("bpc,pc->bp", self.controls, coefficients.second)
         return Batches(self.paths, first), Batches(self.paths, second)
 
@@ -79,98 +71,23 @@ def _fit(values: np.ndarray, controls: np.ndarray) -> np.ndarray:
     return np.linalg.lstsq(controls - controls.mean(axis=0), values - values.mean(), rcond=1e-10)[0]
 
 
-def pairs_of(assets: int) -> list[tuple[int, int]]:
-    """The pairs of spots that second derivatives are taken by: each asset with itself, then every two."""
-    every = list(combinations_with_replacement(range(assets), 2))
-    return sorted(every, key=lambda pair: (pair[0] != pair[1], pair))
-
-
 @dataclass(frozen=True, slots=True)
 class Differentiator:
-    """A tape with the sums that give all derivatives. `derived` and `controls` say which sums are derivatives by leaves
-    and which are their controls; `deltas` and `curved` are, for each pair of spots, the sums that its second derivative
-    is made of, each with its control after it, empty where there is none. `tied` are by asset the
-    sums of both estimates of the pathwise part's delta, whose difference is a control. The last sum is the price. `rough`: the
-    second-order score that they need has no finite variance."""
+    """A derivative tape on one market, ready to run."""
 
-    tape: Tape
-    contract: Contract
-    leaves: Grouped
-    derived: range
-    controls: range
-    deltas: tuple[tuple[int, ...], ...]
-    curved: tuple[tuple[int, ...], ...]
-    tied: dict[int, tuple[int, ...]]
-    rough: bool
-
-    @staticmethod
-    def of(tape: Tape, grid: Grid, contract: Contract, known: Sequence[float | None], *, pathwise: Iterable[int],
-           likelihood: Iterable[int], second: bool) -> Differentiator:
-        """From a tape whose only output is the price and two lists that share out its payments. `known`: the numbers of
-        what is the same on every path; `second`: whether second derivatives are taken."""
-        builder, pathwise, likelihood = Builder.of(tape), list(pathwise), list(likelihood)
-        smooth = sweep(builder, _counted(builder, pathwise), of_the_market)
-        derived, controls = list(sums_of(smooth)), []
-        later = _later(builder, tape, grid, likelihood)
-        law = scores(builder, tape, grid, known, max(later, default=min(1, len(grid.times) - 1)))
-        running = _running(builder, tape, grid, likelihood, later)
-        if likelihood:
-            held = {number for number, step in enumerate(tape.instructions) if step.op in (Op.STEP, *BRIDGES)}
-            derived += sums_of(sweep(builder, _counted(builder, likelihood), of_the_market, held))
-            for score in law.first:
-                if score.step in later:
-                    leaf = builder.leaf(score.leaf)
-                    derived.append(Sum(later[score.step], score.value, leaf))
-                    controls.append(Sum(score.value, running[score.step], leaf))
-            for edge in law.edges if 1 in later else ():
-                leaf = builder.leaf(spot_leaf(tape.leaves, edge.asset))
-                derived.append(Sum(replaced(builder, later[1], edge.extreme, edge.start), edge.weight, leaf))
-                controls.append(Sum(edge.weight, None, leaf))
-        deltas, curved, extra = [], [], []
-        tied: dict[int, tuple[int, ...]] = {}
-        slopes = _by_log_spots(builder, tape, smooth, law.spots) if smooth and second else {}
-        total = builder.fold(Op.ADD, pathwise) if pathwise else builder.constant(0.0)
-
-        def noted(*sums: Sum) -> tuple[int, ...]:
-            first = len(derived) + len(controls) + len(extra)
-            extra.extend(sums)
-            return tuple(range(first, first + len(sums)))
-
-        for pair in pairs_of(len(contract.assets)) if second else ():
-            crossed, score = (), ()
-            if all(asset in law.spots for asset in pair):
-                if smooth:
-                    both = [_crossed(builder, slopes[one], other, law)
-                            for one, other in (pair, pair[::-1])]
-                    crossed = noted(*both[0], *both[1])
-                    if pair[0] == pair[1] and pair[0] not in tied:
-                        tied[pair[0]] = noted(*_crossed(builder, total, pair[0], law), Sum(slopes[pair[0]]))
-                if 1 in later:
-                    bend = law.second[pair]
-                    score = noted(Sum(later[1], bend), Sum(bend))
-            deltas.append(crossed)
-            curved.append(score)
-        noted(Sum(tape.outputs[0].value))
-        made = finished(builder, tape, (*derived, *controls, *extra))
-        return Differentiator(made, contract, grouped(made.leaves), range(len(derived)),
-                              range(len(derived), len(derived) + len(controls)), tuple(deltas), tuple(curved), tied,
-                              bool(likelihood and law.edges))
-
-    def on(self, market: Market) -> Bound:
-        """The tape on a market, ready to run."""
-        values = MarketMap(market, self.contract).values(self.leaves)
-        return Bound(self, market, values, lower(self.tape, values), jacobian(market, self.contract, self.tape.leaves))
-
-
-@dataclass(frozen=True, slots=True)
-class Bound:
-    """A differentiator on one market."""
-
-    of: Differentiator
+    made: DerivativeTape
     market: Market
+    contract: Contract
     values: np.ndarray
     program: Program
     by_number: np.ndarray
+
+    @staticmethod
+    def on(made: DerivativeTape, market: Market, contract: Contract) -> Differentiator:
+        leaves = made.tape.leaves
+        values = MarketMap(market, contract).values(grouped(leaves))
+        return Differentiator(made, market, contract, values, lower(made.tape, values),
+                              jacobian(market, contract, leaves))
 
     def cost(self) -> float:
         """Of one path, by the fixed table of the machine."""
@@ -179,139 +96,38 @@ class Bound:
     def derivatives(self, sampling: Sampling) -> Derivatives:
         """One run. Raises what `Sampling.sums` raises."""
         sums, price = sampling.sums(self.program)
-        first, control = (leaf_sums(self.of.tape, self.values, sums.means, chosen) @ self.by_number
-                          for chosen in (self.of.derived, self.of.controls))
-        second, controls = self._second(sums.means, first, control)
+        made = self.made
+        first, score, by_score, by_path = (
+            leaf_sums(made.tape, self.values, sums.means, chosen) @ self.by_number
+            for chosen in (made.derived, made.controls, made.by_score, made.by_path))
+        second, controls = self._second(sums.means, first, score)
+        control = np.stack([score, by_score - by_path], axis=-1)
         return Derivatives(sums.paths, first, control, second, controls, sums.means[:, -1:], price)
 
-    def _second(self, sums: np.ndarray, first: np.ndarray, control: np.ndarray
-                ) -> tuple[np.ndarray, np.ndarray]:
+    def _second(self, sums: np.ndarray, first: np.ndarray, control: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Second derivatives by the spots out of those by their logs, and the controls of them."""
-        deltas, numbers = self.of.deltas, inputs(self.market, self.of.contract)
+        made, numbers = self.made, inputs(self.market, self.contract)
         spots = [column for column, number in enumerate(numbers) if number.kind == "spot"]
-        second, controls = np.zeros((len(sums), len(deltas))), np.zeros((len(sums), len(deltas), 5))
-        for pair, (one, other) in enumerate(pairs_of(len(spots))[: len(deltas)]):
-            level = [numbers[spots[asset]].value for asset in (one, other)]
-            if deltas[pair]:
-                for side, found in enumerate(np.split(sums[:, list(deltas[pair])], 2, axis=1)):
-                    second[:, pair] += 0.5 * found[:, 0::2].sum(axis=1)
-                    controls[:, pair, side] = found[:, 1::2].sum(axis=1)
-            if self.of.curved[pair]:
-                second[:, pair] += sums[:, self.of.curved[pair][0]]
-                controls[:, pair, 2] = sums[:, self.of.curved[pair][1]]
+        second = np.zeros((len(sums), len(made.crossed)))
+        controls = np.zeros((*second.shape, CONTROLS))
+        for pair, (one, other) in enumerate(pairs_of(len(spots))[: len(made.crossed)]):
+            levels = numbers[spots[one]].value, numbers[spots[other]].value
+            for side, parts in enumerate(made.crossed[pair]):
+                second[:, pair] += 0.5 * sums[:, parts[0::2]].sum(axis=1)
+                controls[:, pair, side] = sums[:, parts[1::2]].sum(axis=1)
+            if made.curved[pair]:
+                bent, score = made.curved[pair]
+                second[:, pair] += sums[:, bent]
+                controls[:, pair, 2] = sums[:, score]
             if one == other:
-                second[:, pair] -= level[0] * first[:, spots[one]]
-                controls[:, pair, 3] = level[0] * control[:, spots[one]]
-                if one in self.of.tied:
-                    *by_score, delta = self.of.tied[one]
+                second[:, pair] -= levels[0] * first[:, spots[one]]
+                controls[:, pair, 3] = levels[0] * control[:, spots[one]]
+                if one in made.tied:
+                    by_score, delta = made.tied[one]
                     controls[:, pair, 4] = sums[:, by_score[0::2]].sum(axis=1) - sums[:, delta]
-            second[:, pair] /= level[0] * level[1]
-            controls[:, pair] /= level[0] * level[1]
+            if made.stood[pair]:
+                (bent,), *both = made.stood[pair]
+                controls[:, pair, 5] = sums[:, bent] - 0.5 * sum(sums[:, parts[0::2]].sum(axis=1) for parts in both)
+            second[:, pair] /= levels[0] * levels[1]
+            controls[:, pair] /= levels[0] * levels[1]
         return second, controls
-
-
-def _counted(builder: Builder, values: Iterable[int]) -> dict[int, int]:
-    """How often each value counts, as values of the tape."""
-    return {value: builder.constant(float(count)) for value, count in Counter(values).items()}
-
-
-def _crossed(builder: Builder, delta: int, asset: int, law: Scores) -> list[Sum]:
-    """The likelihood ratio by an asset's log spot of a delta on each path: sums and their controls in turn."""
-    move = law.spots[asset]
-    found = [Sum(delta, move), Sum(move)]
-    for edge in law.edges:
-        if edge.asset == asset:
-            found += [Sum(replaced(builder, delta, edge.extreme, edge.start), edge.weight), Sum(edge.weight)]
-    return found
-
-
-def replaced(builder: Builder, value: int, old: int, new: int) -> int:
-    """A value of the tape as it would be with `new` in place of `old`."""
-    instead = {old: new}
-    for number in range(old + 1, value + 1):
-        step = builder.instructions[number]
-        if any(k in instead for k in step.operands):
-            instead[number] = builder.emit(step.op, *(instead.get(k, k) for k in step.operands), place=step.place)
-    return instead.get(value, value)
-
-
-def _by_log_spots(builder: Builder, tape: Tape, gradient: Gradient, assets: Iterable[int]) -> dict[int, int]:
-    """By asset the derivative by its log spot as a value on each path: paths read it alone, or with the first drift
-    added."""
-    spots = {asset: builder.leaf(spot_leaf(tape.leaves, asset)) for asset in assets}
-    read = {spot: [spot] for spot in spots.values()}
-    for number, step in enumerate(tape.instructions):
-        if step.op is Op.ADD:
-            for operand in step.operands:
-                if operand in read:
-                    read[operand].append(number)
-    return {asset: on_paths(builder, [part for value in read[spot] for part in gradient.get(value, ())])
-            for asset, spot in spots.items()}
-
-
-def _later(builder: Builder, tape: Tape, grid: Grid, payments: Sequence[int]) -> dict[int, int]:
-    """For each step the sum of the payments that depend on its draws or on later ones."""
-    latest = latest_steps(tape, grid)
-    ordered = sorted(payments, key=lambda value: -latest[value])
-    if not ordered:
-        return {}
-    totals = list(accumulate(ordered, lambda total, value: builder.emit(Op.ADD, total, value)))
-    found = {}
-    for number in range(1, latest[ordered[0]] + 1):
-        count = sum(latest[value] >= number for value in ordered)
-        found[number] = totals[count - 1]
-    return found
-
-
-def _running(builder: Builder, tape: Tape, grid: Grid, payments: Sequence[int], later: Iterable[int]) -> dict[int, int | None]:
-    """For each step the flag, known before it, without which none of the later payments is made; None for no such flag.
-
-    A score times this flag still has mean zero, and is the better control: where a contract has ended nothing is paid.
-    """
-    latest = latest_steps(tape, grid)
-    conditions = {payment: _conditions(tape, payment) for payment in payments}
-    found: dict[int, int | None] = {}
-    for number in later:
-        due = [set(conditions[payment]) for payment in payments if latest[payment] >= number]
-        common = [flag for flag in sorted(set.intersection(*due)) if latest[flag] < number]
-        found[number] = builder.fold(Op.AND, common) if common else None
-    return found
-
-
-def _conditions(tape: Tape, payment: int) -> list[int]:
-    """Flags that all must hold for a payment not to be 0."""
-    step = tape.instructions[payment]
-    if step.op is Op.SELECT:
-        nothing = tape.instructions[step.operands[2]]
-        return _conjuncts(tape, step.operands[0]) if nothing.op is Op.CONSTANT and nothing.payload == 0.0 else []
-    return []
-
-
-def _conjuncts(tape: Tape, flag: int) -> list[int]:
-    step = tape.instructions[flag]
-    return [part for k in step.operands for part in _conjuncts(tape, k)] if step.op is Op.AND else [flag]
-
-
-def without_first_levels(tape: Tape) -> Tape:
-    """The tape without today's level where an extreme that starts from it is joined to it: it lies beyond it anyway."""
-    builder, values = Builder(), []
-    leaves = {number: step.payload for number, step in enumerate(tape.instructions) if step.op is Op.LEAF}
-
-    def starts(value: int, asset: int, joined: Op) -> bool:
-        step = tape.instructions[value]
-        if step.op is joined:
-            return any(starts(k, asset, joined) for k in step.operands)
-        if step.op is Op.EXP:
-            return starts(step.operands[0], asset, joined)
-        bridge = Op.BRIDGE_LOW if joined is Op.MIN else Op.BRIDGE_HIGH
-        return step.op is bridge and leaves.get(step.operands[0]) == spot_leaf(tape.leaves, asset)
-
-    for step in tape.instructions:
-        values.append(builder.copy(step, tuple(values[k] for k in step.operands)))
-        if step.op in (Op.MIN, Op.MAX):
-            for first, other in (step.operands, step.operands[::-1]):
-                leaf = leaves.get(first)
-                if leaf and leaf.kind is LeafKind.FORWARD and leaf.end == 0.0 and starts(other, leaf.asset, step.op):
-                    values[-1] = values[other]
-    outputs = [output.at(values[output.value]) for output in tape.outputs]
-    return finished(builder, replace(tape, outputs=tuple(outputs)), ())

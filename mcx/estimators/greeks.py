@@ -1,8 +1,8 @@
 """How a contract's value moves: every sensitivity with its error and the estimator that gave it.
 
-Which estimators are valid is decided by the tape. Among the valid ones a pilot on its own stream chooses, for each asset's
-delta, each vol curve and so on, the one with the smallest variance times cost; costs come from a fixed table, so that
-one seed has one answer.
+Which estimators are valid is decided by the tape. Among the valid ones a pilot on its own stream chooses, for each
+asset's delta, each vol curve and so on, the one with the smallest variance times cost; costs come from a fixed table,
+so that one seed has one answer.
 """
 
 from __future__ import annotations
@@ -16,21 +16,32 @@ import numpy as np
 
 from mcx.checked.market import Market
 from mcx.estimators.batches import FEWEST_PATHS, Batches, Sampling
-from mcx.estimators.differentiate import Bound, Coefficients, pairs_of
+from mcx.estimators.derivative_tape import pairs_of
+from mcx.estimators.differentiate import Coefficients, Differentiator
 from mcx.estimators.estimate import Estimate
-from mcx.estimators.ladder import Point, Step, grid, ladder
+from mcx.estimators.ladder import Point, Step, grid, ladder, spot_shifts, today, turning
 from mcx.estimators.methods import PATHWISE, Method, methods
+from mcx.estimators.pace import announce, pace
 from mcx.estimators.plan import Plan, Precision, plan
 from mcx.estimators.price import Ready
-from mcx.estimators.revalue import Revaluer, central_differences, impossible, second_differences, step_of
+from mcx.estimators.revalue import (
+    IN_PROPORTION,
+    RATES,
+    Revaluer,
+    central_differences,
+    impossible,
+    second_differences,
+    step_of,
+)
 from mcx.estimators.sensitivities import Curvature, Sensitivity, first_order, second_order
 from mcx.estimators.theta import between, theta
-from mcx.leaves.jacobian import Input, inputs, without_derivative
+from mcx.leaves.jacobian import Input, inputs, moved, without_derivative
 from mcx.machine.run import Notice, Stream, values_by_path
 from mcx.tape.smooth import Jump
 
 PILOT_PATHS = 1 << 14
 NEAR = 1.0 / 12.0  # years
+NEARBY = 0.01  # of the spots
 ESTIMATORS = ("auto", "pathwise", "likelihood", "mixed")
 REVALUATION = "revaluation"
 
@@ -72,6 +83,7 @@ class Found:
     plan: Plan
     seed: int
     seconds: float
+    interrupted: bool = False
 
 
 def sensitivities(
@@ -103,9 +115,9 @@ class _Run:
         self.numbers = inputs(market, self.contract)
         self.lines = [line for line in first_order(self.numbers, self.contract) if self._wanted(line.subject)]
         self.curvatures = [line for line in second_order(self.numbers, self.contract) if self._wanted(line.subject)]
-        self.methods = methods(ready, market, wish.estimator)
         self.pilot = Sampling(seed, PILOT_PATHS, Stream.PILOT, threads, notice=notice)
-        self.bound: dict[str, Bound] = {}
+        self.methods = methods(ready, market, wish.estimator, self.pilot)
+        self.bound: dict[str, Differentiator] = {}
         self.plan = self._plan(asked)
         counted = progress and (lambda done, _, error: progress(done, self.plan.paths, error))
         self.sampling = Sampling(seed, self.plan.paths, Stream.MAIN, threads, counted, notice)
@@ -115,6 +127,8 @@ class _Run:
         self.base: tuple[Batches, Estimate] | None = None  # the price of the main run
         self.choices: list[str] = []
         self.refused: list[tuple[Sensitivity | Curvature, str]] = []
+        self.notes: list[str] = []
+        self.interrupted = False
 
     def found(self) -> Found:
         begun = time.perf_counter()
@@ -122,14 +136,21 @@ class _Run:
                  for number, reason in without_derivative(self.market, self.contract).items()}
         values = [*self._first(kinks), *self._second()]
         base, price = self.base or self.revaluer.price(self.market, self.sampling)
-        values.append(self._theta(base))
-        comparison, notes = self._comparison(base)
-        rungs = self._ladder(base)
-        points = grid(self.revaluer, self.market, self._moving(), self.wish.spot_moves or (0.0,), self.wish.vol_moves,
-                      self.sampling, base) if self.wish.vol_moves else ()
-        notes += [*between(self.ready.dated), *self._near(values)]
+        comparison: list[Value] = []
+        rungs: list[Step] = []
+        points: list[Point] = []
+        if not self.interrupted:
+            try:
+                values.append(self._theta(base))
+                comparison += self._comparison(base)
+                rungs += self._ladder(base)
+                points += self._grid(base)
+            except KeyboardInterrupt:
+                self.interrupted = True
+        self.notes += [*between(self.ready.dated), *self._near(values), *self._turning()]
         return Found(price, tuple(values), tuple(self.refused), tuple(comparison), tuple(self.choices),
-                     self.methods.jumps, rungs, points, tuple(notes), self.plan, self.sampling.seed, time.perf_counter() - begun)
+                     self.methods.jumps, tuple(rungs), tuple(points), tuple(self.notes), self.plan, self.sampling.seed,
+                     time.perf_counter() - begun, self.interrupted)
 
     def _wanted(self, subject: str) -> bool:
         """Whether an asset's or a pair's line was asked for; a currency's always is."""
@@ -149,29 +170,38 @@ class _Run:
                 self._bound(method).derivatives(replace(self.pilot, paths=max(paths, FEWEST_PATHS)))
             return time.perf_counter() - begun
 
-        found = plan(asked, prices, seconds_for, exact=program.outputs[0] < 0)
-        return replace(found, paths=max(found.paths, FEWEST_PATHS))
+        speed = pace((self._bound(method).program for method in self.methods.valid), self.pilot.threads)
+        found = plan(asked, prices, seconds_for, exact=program.outputs[0] < 0, pace=speed)
+        found = replace(found, paths=max(found.paths, FEWEST_PATHS))
+        announce(found.paths, speed, self.pilot.notice)
+        return found
 
-    def _bound(self, method: Method) -> Bound:
+    def _bound(self, method: Method) -> Differentiator:
         """A method's tape on the market as it stands."""
         if method.name not in self.bound:
-            self.bound[method.name] = method.engine.on(self.market)
+            self.bound[method.name] = method.on(self.market)
         return self.bound[method.name]
 
     def _pilot(self, method: Method) -> tuple[Coefficients, Batches, Batches]:
         """The coefficients of a method's controls, and what it finds on the pilot; each runs once."""
         if method.name not in self.piloted:
             found = self._bound(method).derivatives(self.pilot)
+            if found.price.paths < self.pilot.paths:
+                raise KeyboardInterrupt
             coefficients = found.fitted()
             self.piloted[method.name] = (coefficients, *found.with_controls(coefficients))
         return self.piloted[method.name]
 
-    def _main(self, method: Method) -> tuple[Batches, Batches]:
-        """First and second derivatives by a method, from the main run."""
+    def _main(self, method: Method) -> tuple[Batches, Batches] | None:
+        """First and second derivatives by a method, from the main run; None after an interruption of another's."""
         if method.name not in self.done:
+            if self.interrupted:
+                return None
+            coefficients = self._pilot(method)[0]
             found = self._bound(method).derivatives(self.sampling)
-            self.done[method.name] = found.with_controls(self._pilot(method)[0])
+            self.done[method.name] = found.with_controls(coefficients)
             self.base = Batches(found.paths, found.base), found.price
+            self.interrupted = found.price.paths < self.sampling.paths
         return self.done[method.name]
 
     def _first(self, kinks: Mapping[int, str]) -> Iterator[Value]:
@@ -184,12 +214,11 @@ class _Run:
             method = self._choice(f"{lines[0].name} of {subject}", kind, lambda pilot: pilot[1].estimate(whole))
             for line in lines:
                 reason = next((kinks[column] for column in line.columns if column in kinks), "")
-                if method is None:
-                    reason = self.methods.why_not(kind)
-                if reason:
-                    self.refused.append((line, reason))
+                found = None if method is None or reason else self._main(method)
+                if found:
+                    yield Value(line, found[0].estimate(line.weights(size)), method.name)
                 else:
-                    yield Value(line, self._main(method)[0].estimate(line.weights(size)), method.name)
+                    self.refused.append((line, reason or self._why_not(method, kind)))
 
     def _family(self, line: Sensitivity) -> tuple[str, str]:
         return self.numbers[line.columns[0]].kind, line.subject
@@ -200,17 +229,22 @@ class _Run:
             weights = np.zeros(len(every))
             weights[every.index(line.assets)] = line.factor
             method = self._choice(f"{line.name} of {line.subject}", "gamma", lambda pilot: pilot[2].estimate(weights))
-            if method is None:
-                self.refused.append((line, self.methods.why_not("gamma")))
+            found = method and self._main(method)
+            if found:
+                yield Value(line, found[1].estimate(weights), method.gamma)
             else:
-                yield Value(line, self._main(method)[1].estimate(weights), method.gamma)
+                self.refused.append((line, self._why_not(method, "gamma")))
+
+    def _why_not(self, method: Method | None, kind: str) -> str:
+        return self.methods.why_not(kind) if method is None else "interrupted before its estimator had run"
 
     def _choice(self, words: str, kind: str, estimate: Callable[[tuple], Estimate]) -> Method | None:
         """The valid estimator with the smallest variance times cost in the pilot; None where none is valid."""
         valid = self.methods.for_kind(kind)
         if len(valid) < 2:
             return valid[0] if valid else None
-        burden = {method.name: estimate(self._pilot(method)).standard_error**2 * self._bound(method).cost() for method in valid}
+        burden = {method.name: estimate(self._pilot(method)).standard_error**2 * self._bound(method).cost()
+                  for method in valid}
         best = min(valid, key=lambda method: burden[method.name])
         others = ", ".join(f"{_times(burden[method.name], burden[best.name])} {method.name}" for method in valid
                            if method is not best)
@@ -225,19 +259,29 @@ class _Run:
     def _near(self, values: list[Value]) -> Iterator[str]:
         """A word about a first date so near that likelihood ratios scatter."""
         first = self.ready.unrolled.grid.times[1:2]
-        if first and first[0] < NEAR and any(value.what.name == "delta" and value.estimator != PATHWISE for value in values):
-            yield (f"the first simulated date is only {365.0 * first[0]:.3g} days away: the error of a likelihood ratio's "
-                   f"delta grows as the root of that time shrinks, that of its gamma as the time itself does")
+        scored = any(value.what.name == "delta" and value.estimator != PATHWISE for value in values)
+        if scored and first and first[0] < NEAR:
+            yield (f"the first simulated date is only {_so_many(365.0 * first[0], 'day')} away: the error of a "
+                   f"likelihood ratio's delta grows as the root of that time shrinks, that of its gamma as the time "
+                   f"itself does; a ladder of spot moves says more")
+
+    def _turning(self) -> Iterator[str]:
+        """A word about conditions on today's levels that a small move of the spots turns."""
+        here, *there = (today(self.revaluer.tape, moved(self.market, spot_shifts(self._moving(), move)), self.contract)
+                        for move in (0.0, -NEARBY, NEARBY))
+        for place in turning(here, *there):
+            yield (f"the condition at {place} is decided by today's levels and turns where spots move by "
+                   f"{NEARBY:.0%}: the price may jump there, which no sensitivity shows; a ladder of spot moves does")
 
     def _moving(self) -> list[Input]:
         """The numbers that a ladder or a grid moves: spots and vols of the assets asked for."""
         return [number for number in self.numbers if number.kind in ("spot", "vol") and self._wanted(number.subject)]
 
-    def _comparison(self, base: Batches) -> tuple[list[Value], list[str]]:
+    def _comparison(self, base: Batches) -> list[Value]:
         """The same sensitivities by revaluation, where a bump was asked for."""
-        size, notes, values = self.wish.bump, [], []
+        size, values = self.wish.bump, []
         if size is None:
-            return values, notes
+            return values
         steps = {}
         for column, number in enumerate(self.numbers):
             if any(column in line.columns for line in self.lines):
@@ -245,7 +289,7 @@ class _Run:
                 reasons = (impossible(self.market, self.contract, {number: side * step}) for side in (1.0, -1.0))
                 reason = next(filter(None, reasons), "")
                 if reason:
-                    notes.append(f"no revaluation for the {number}: moved by {step:g}, {reason}")
+                    self.notes.append(f"no revaluation for the {number}: moved by ±{step:g}, {reason}")
                 else:
                     steps[number] = step
         found = central_differences(self.revaluer, self.market, steps, self.sampling)
@@ -254,7 +298,8 @@ class _Run:
             if all(column in at for column in line.columns):
                 weights = np.zeros(len(at))
                 weights[[at[column] for column in line.columns]] = line.factors
-                values.append(Value(line, found.estimate(weights), REVALUATION, _bumped(self.numbers[line.columns[0]], size)))
+                note = _bumped(self.numbers[line.columns[0]], size)
+                values.append(Value(line, found.estimate(weights), REVALUATION, note))
         if self.curvatures:
             pairs = [tuple(self.numbers[column] for column in line.columns) for line in self.curvatures]
             second = second_differences(self.revaluer, self.market, pairs, size, self.sampling, base)
@@ -262,7 +307,13 @@ class _Run:
                 weights = np.zeros(len(pairs))
                 weights[number] = line.factor
                 values.append(Value(line, second.estimate(weights), REVALUATION, _bumped(pairs[number][0], size)))
-        return values, notes
+        return values
+
+    def _grid(self, base: Batches) -> tuple[Point, ...]:
+        if not self.wish.vol_moves:
+            return ()
+        return grid(self.revaluer, self.market, self._moving(), self.wish.spot_moves or (0.0,), self.wish.vol_moves,
+                    self.sampling, base)
 
     def _ladder(self, base: Batches) -> tuple[Step, ...]:
         if not self.wish.spot_moves:
@@ -275,7 +326,7 @@ class _Run:
         def deltas(market: Market) -> Batches | None:
             if method is None:
                 return None
-            found = method.engine.on(market).derivatives(self.sampling).with_controls(self._pilot(method)[0])[0]
+            found = method.on(market).derivatives(self.sampling).with_controls(self._pilot(method)[0])[0]
             return Batches(found.paths, found.means[:, spots])
 
         return ladder(self.revaluer, self.market, self._moving(), self.wish.spot_moves, self.sampling, base, deltas)
@@ -285,6 +336,13 @@ def _times(burden: float, best: float) -> str:
     return f"{burden / best:.3g} times as much for" if best > 0.0 else "not 0 for"
 
 
+def _so_many(number: float, unit: str) -> str:
+    written = f"{number:.3g}"
+    return f"{written} {unit}" if written == "1" else f"{written} {unit}s"
+
+
 def _bumped(number: Input, size: float) -> str:
+    if number.kind in IN_PROPORTION:
+        return f"moved by ±{100 * size:.3g} %"
     step = step_of(number, size)
-    return f"moved by ±{100 * size:.3g} %" if number.kind in ("spot", "forward") else f"moved by ±{step:g}"
+    return f"moved by ±{1e4 * step:.3g} bp" if number.kind in RATES else f"moved by ±{_so_many(100 * step, 'point')}"

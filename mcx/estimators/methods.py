@@ -5,22 +5,30 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
+import numpy as np
+
 from mcx.checked.contract import Contract
+from mcx.checked.conversions import simulated_rates
 from mcx.checked.market import Market
-from mcx.estimators.differentiate import Differentiator, without_first_levels
+from mcx.estimators.batches import Sampling
+from mcx.estimators.derivative_tape import DerivativeTape, derivative_tape, without_first_levels
+from mcx.estimators.differentiate import Differentiator
 from mcx.estimators.price import Ready
+from mcx.estimators.proxy import with_proxy
 from mcx.faults import Refusal
 from mcx.leaves.market_map import MarketMap
+from mcx.machine.run import values_by_path
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Instruction, Leaf, LeafKind, Tape
-from mcx.tape.registers import uniform_values
+from mcx.tape.registers import lower, uniform_values
 from mcx.tape.smooth import Jump, jumps, payments
 
 PATHWISE, LIKELIHOOD, MIXED = "pathwise", "likelihood ratio", "mixed"
 GAMMAS = {PATHWISE: "likelihood ratio of the pathwise delta", LIKELIHOOD: "second-order likelihood ratio",
           MIXED: "mixed: likelihood ratio of the pathwise delta, second-order where payments jump"}
 ESCROWS = (LeafKind.ESCROW, LeafKind.MEAN_ESCROW)
+ESCROWED_BY = ("rate", "yield", "forward", "dividend", "dividend share", "decrement points")  # what the escrow hangs on
 COMPARED = (Op.LT, Op.LE, Op.EQ, Op.NE)
 SINGULAR = 1e-14  # an own variance below this share of the whole
 MOST_DRAWS = 64  # where every payment is smooth; the variance of a likelihood ratio grows with the steps
@@ -31,8 +39,12 @@ class Method:
     """A valid estimator. `refusals`: kinds of numbers, and 'gamma', for which it is not, with the reason."""
 
     name: str
-    engine: Differentiator
+    made: DerivativeTape
+    contract: Contract
     refusals: dict[str, str]
+
+    def on(self, market: Market) -> Differentiator:
+        return Differentiator.on(self.made, market, self.contract)
 
     @property
     def gamma(self) -> str:
@@ -55,9 +67,9 @@ class Methods:
         return next((method.refusals[kind] for method in self.valid if kind in method.refusals), self.reason)
 
 
-def methods(ready: Ready, market: Market, asked: str) -> Methods:
-    """The valid estimators among those asked for ('auto' for all). Raises Refusal where what was asked for is not
-    valid, with the condition that forbids it."""
+def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = None) -> Methods:
+    """The valid estimators among those asked for ('auto' for all); with a pilot, likelihood ratios have a smooth
+    stand-in as a control. Raises Refusal where what was asked for is not valid, with the condition that forbids it."""
     contract, unrolled = ready.dated.contract, ready.unrolled
     price = unrolled.tape.outputs[0]
     tape = without_first_levels(drop_dead_code(replace(unrolled.tape, outputs=(price,), sums=())))
@@ -68,25 +80,35 @@ def methods(ready: Ready, market: Market, asked: str) -> Methods:
     jumping = [payment for payment in paid if found[payment]]
     smooth = [payment for payment in paid if not found[payment]]
     places = tuple({(jump.kind, jump.place): jump for payment in jumping for jump in found[payment]}.values())
-    still = without_own_randomness(dict(zip(tape.leaves, values, strict=True)), contract)
+    leaf_values = dict(zip(tape.leaves, values, strict=True))
+    simulated = (*contract.assets, *simulated_rates(contract.conversion, contract.currency, market))
+    still = without_own_randomness(leaf_values, simulated)
+
+    def by_path(with_basis: Tape) -> np.ndarray:
+        return values_by_path(lower(with_basis, values), seed=pilot.seed, paths=pilot.paths, stream=pilot.stream,
+                              threads=pilot.threads)
 
     def method(name: str, pathwise: list[int], likelihood: list[int]) -> Method:
-        engine = Differentiator.of(tape, unrolled.grid, contract, known, pathwise=pathwise, likelihood=likelihood,
-                                   second=not still)
+        own, proxy = tape, None
+        if likelihood and pilot and not still:
+            logs = {leaf.asset: value for leaf, value in leaf_values.items() if leaf.kind is LeafKind.LOG_SPOT}
+            own, proxy = with_proxy(tape, likelihood, logs, by_path)
+        made = derivative_tape(own, unrolled.grid, len(contract.assets), uniform_values(own, values), pathwise=pathwise,
+                               likelihood=likelihood, second=not still, proxy=proxy)
         refusals = {}
         if likelihood and (reason := read_today(tape, known)):
-            refusals["spot"] = reason
+            refusals |= {"spot": reason, "fx spot": reason}
         if likelihood and (reason := dividends_compared(tape, known)):
             blended = any(market.assets[name].blend for name in contract.assets)
-            refusals |= {kind: reason for kind in ("rate", "yield", *(("spot",) if blended else ()))}
-        if reason := still or second_order_trouble(tape, engine):
+            refusals |= {kind: reason for kind in (*ESCROWED_BY, *(("spot",) if blended else ()))}
+        if reason := still or second_order_trouble(tape, made):
             refusals["gamma"] = reason
-        return Method(name, engine, refusals)
+        return Method(name, made, contract, refusals)
 
     reason = f"the payoff jumps, and {still}" if still else ""
     if asked == "pathwise" and jumping:
         raise Refusal(f"'{contract.title}': no pathwise estimate, since the payoff jumps at {_listed(places)}; such an "
-                      f"estimate would miss the jump and show a small error")
+                      f"estimate would miss that and show a small error")
     if asked in ("likelihood", "mixed") and still and (jumping or asked == "likelihood"):
         raise Refusal(f"'{contract.title}': no likelihood ratio, since {still}")
     valid = []
@@ -102,8 +124,9 @@ def methods(ready: Ready, market: Market, asked: str) -> Methods:
     return Methods(tuple(valid), places, reason)
 
 
-def without_own_randomness(values: dict[Leaf, float], contract: Contract) -> str:
-    """Why the paths have no density: an asset that does not move by itself, or as good as not; '' where all do."""
+def without_own_randomness(values: dict[Leaf, float], names: Sequence[str]) -> str:
+    """Why the paths have no density: an asset or a rate of exchange (by `names`) that does not move by itself, or as good
+    as not; '' where all do."""
     variances: dict[tuple[int, float], float] = {}
     for leaf, value in values.items():
         if leaf.kind is LeafKind.FACTOR:
@@ -111,14 +134,14 @@ def without_own_randomness(values: dict[Leaf, float], contract: Contract) -> str
     for leaf, value in values.items():
         if leaf.kind is LeafKind.FACTOR and leaf.asset == leaf.other:
             if value**2 <= SINGULAR * variances[leaf.asset, leaf.end]:
-                return (f"{contract.assets[leaf.asset]} has no randomness of its own between {leaf.start:.6g}y and "
+                return (f"{names[leaf.asset]} has no randomness of its own between {leaf.start:.6g}y and "
                         f"{leaf.end:.6g}y: no vol there, or a singular correlation matrix")
     return ""
 
 
 def read_today(tape: Tape, known: Sequence[float | None]) -> str:
-    """Why a likelihood ratio by a spot would miss something: today's level is compared with one that is drawn, and moves
-    while that is held; '' where it is not."""
+    """Why a likelihood ratio by a spot would miss something: today's level is compared with one that is drawn, and
+    moves while that is held; '' where it is not."""
     today: set[int] = set()
     for number, step in enumerate(tape.instructions):
         if _is_today(step) or any(k in today for k in step.operands):
@@ -142,13 +165,13 @@ def dividends_compared(tape: Tape, known: Sequence[float | None]) -> str:
     return ""
 
 
-def second_order_trouble(tape: Tape, engine: Differentiator) -> str:
+def second_order_trouble(tape: Tape, made: DerivativeTape) -> str:
     """Why there is no gamma; '' where there is one."""
     if any(map(_is_today, tape.instructions)):
         return "the payoff reads today's level itself beside later ones; a second derivative through both is not taken"
-    if engine.rough:
-        return ("a payment that jumps reads a continuously watched extreme itself: its second-order score has no finite "
-                "variance")
+    if made.rough:
+        return ("a payment that jumps reads a continuously watched extreme itself: its second-order score has no "
+                "finite variance")
     return ""
 
 

@@ -23,11 +23,11 @@ SAME_TIME = 1e-9
 
 
 def theta(ready: Ready, market: Market, sampling: Sampling, base: Batches) -> Batches:
-    """The price one calendar day on less the price today, in the price's unit, as a single quantity; `base` is the price
-    today on the same paths.
+    """The price one calendar day on less the price today, in the price's unit, as a single quantity; `base` is the
+    price today on the same paths.
 
-    Watched stretches are split where the curves bend on either day, so that the bridges of both are exact; then the price
-    today is taken on that grid as well.
+    Watched stretches are split where the curves bend on either day, so that the bridges of both are exact; then the
+    price today is taken on that grid as well.
     """
     contract, tape = ready.dated.contract, ready.unrolled.tape
     if ready.dated.watches:

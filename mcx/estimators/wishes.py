@@ -32,7 +32,8 @@ def estimator_of(name: str) -> str:
 
 
 def bump_of(size: str | float | None) -> float | None:
-    """How far numbers are moved for a revaluation, as a share; raises RequestError for what moves nothing or too far."""
+    """How far numbers are moved for a revaluation, as a share; raises RequestError for what moves nothing or too
+    far."""
     if size is None:
         return None
     share = _share(size)

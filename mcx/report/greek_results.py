@@ -1,9 +1,9 @@
 """The result of `mcx greeks`, and the keys of its JSON.
 
 Units are those of the trade, and each number's is stated beside it in `unit`: delta per 1 of spot, and for a move of
-1 % in percent of the notional (in currency where there is none); gamma as the change of delta for a move of 1 %; vega and
-correlation per point (1 %), rho, yield and funding per basis point of a zero rate, theta for one calendar day. What is
-not in percent of the notional is in the contract's currency, for the whole notional or number of units.
+1 % in percent of the notional (in currency where there is none); gamma as the change of delta for a move of 1 %; vega
+and correlation per point (1 %), rho, yield and funding per basis point of a zero rate, theta for one calendar day. What
+is not in percent of the notional is in the contract's currency, for the whole notional or number of units.
 """
 
 from __future__ import annotations
@@ -16,8 +16,8 @@ from mcx.report.results import Planned, Result
 @dataclass(frozen=True, slots=True)
 class Greek(Result):
     """One sensitivity. `asset` is the asset, the pair ('harbour/quarry') or, for rho and funding, the currency; `tenor`
-    the node of the curve as written, 'all' for all its nodes at once, '' where there is one number only. `resolved`: the
-    value is at least twice its error. `note` says what is known of a bias."""
+    the node of the curve as written, 'all' for all its nodes at once, '' where there is one number only. `resolved`:
+    the value is at least twice its error. `note` says what is known of a bias."""
 
     name: str
     asset: str
@@ -42,7 +42,8 @@ class Refused(Result):
 
 @dataclass(frozen=True, slots=True)
 class Jump(Result):
-    """What makes a payment jump: a 'condition', or a 'division' by what may be 0, and where in which file it stands."""
+    """What makes a payment jump: a 'condition', a 'division' by what may be 0, or a 'root' (also a log) of what may be
+    0, which has no bounded slope there; and where in which file it stands."""
 
     kind: str
     place: str
@@ -59,8 +60,8 @@ class AssetDelta(Result):
 
 @dataclass(frozen=True, slots=True)
 class Rung(Result):
-    """The contract with all spots moved by `spot_move` (0.01 is 1 %): price and error in the unit of the price, value in
-    currency, `change` of the value from where the spots stand with the error of that difference, deltas by asset.
+    """The contract with all spots moved by `spot_move` (0.01 is 1 %): price and error in the unit of the price, value
+    in currency, `change` of the value from where the spots stand with the error of that difference, deltas by asset.
     `jumps` are the places of conditions on today's levels that turn between this rung and the next."""
 
     spot_move: float
@@ -75,7 +76,8 @@ class Rung(Result):
 
 @dataclass(frozen=True, slots=True)
 class GridPoint(Result):
-    """As a rung, with all vols moved by `vol_move` (0.01 is one point) as well. `refused` says why there is no value."""
+    """As a rung, with all vols moved by `vol_move` (0.01 is one point) as well. `refused` says why there is no
+    value."""
 
     spot_move: float
     vol_move: float
@@ -91,9 +93,9 @@ class GridPoint(Result):
 class GreeksResult(Result):
     """How a contract's value moves: `mcx greeks`.
 
-    `greeks` are the estimates, `comparison` the same ones by revaluation with common random numbers where that was asked
-    for. `estimator` is what was asked for; each Greek names its own, and `choices` says why. `jumps` are the conditions
-    that forbid pathwise estimates. `bump`, `assets`, `spot_moves` and `vol_moves` repeat the request.
+    `greeks` are the estimates, `comparison` the same ones by revaluation with common random numbers where that was
+    asked for. `estimator` is what was asked for; each Greek names its own, and `choices` says why. `jumps` are the
+    conditions that forbid pathwise estimates. `bump`, `assets`, `spot_moves` and `vol_moves` repeat the request.
     """
 
     contract: str
@@ -109,6 +111,7 @@ class GreeksResult(Result):
     seconds: float
     seed: int
     reduction: str
+    interrupted: bool
     estimator: str
     bump: float | None
     assets: tuple[str, ...]
@@ -131,6 +134,12 @@ class GreeksResult(Result):
 
 @dataclass(frozen=True, slots=True)
 class GreeksTable(Result):
-    """Several contracts on one market, in the order of the files."""
+    """Several contracts on one market, in the order of the files. `not_valued` are the titles of those that an
+    interruption left out."""
 
     contracts: tuple[GreeksResult, ...]
+    not_valued: tuple[str, ...] = ()
+
+    @property
+    def interrupted(self) -> bool:
+        return bool(self.not_valued) or any(result.interrupted for result in self.contracts)

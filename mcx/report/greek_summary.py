@@ -39,6 +39,7 @@ def greeks_result(ready: Ready, market: Market, wish: Wish, found: Found) -> Gre
         seconds=found.seconds,
         seed=found.seed,
         reduction=NO_REDUCTION,
+        interrupted=found.interrupted,
         estimator=wish.estimator,
         bump=wish.bump,
         assets=wish.assets,
@@ -97,6 +98,9 @@ def _point(point: Point, size: float) -> GridPoint:
 
 
 def _warnings(found: Found) -> Iterator[str]:
+    if found.interrupted:
+        yield (f"interrupted after {found.price.paths:,} of {found.plan.paths:,} paths: the estimates are those of the "
+               f"paths so far, and what had not begun is left out")
     yield from found.plan.warnings
     yield from found.notes
     unclear = [value.what for value in found.values if not resolved(value.estimate)]

@@ -1,4 +1,5 @@
-"""Valuation records: everything that a price, or its sensitivities, depend on, so that it can be found again, to the last bit.
+"""Valuation records: everything that a price, or its sensitivities, depend on, so that it can be found again, to the
+last bit.
 
 A record is one JSON document: the text of every file and definition with its SHA-256, the request, the versions of all
 that computes, the type of the processor, and the results. Its own SHA-256 stands in it, so that a record which was cut
@@ -133,7 +134,8 @@ def _whole(record: Mapping) -> bool:
     """Whether everything is there that a replay reads, one request for each result."""
     match record:
         case {"inputs": [*inputs], "request": [*requests], "results": [*results], "environment": {}}:
-            asked = {"paths", "seed"} if record.get("verb", "price") == "price" else {*REQUEST.get(record["verb"], ("",))}
+            verb = record.get("verb", "price")
+            asked = {"paths", "seed"} if verb == "price" else {*REQUEST.get(verb, ("no such verb",))}
             return (len(requests) == len(results)
                     and all(isinstance(each, dict) and {"file", "text"} <= each.keys() for each in inputs)
                     and all(isinstance(each, dict) and asked <= each.keys() for each in requests))

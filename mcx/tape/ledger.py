@@ -41,6 +41,7 @@ class Ledger:
     lives: list[tuple[int, float]] = field(default_factory=list)  # flag of the ending, time of its payment
     last_payment: float = 0.0
     payments: list[Payment] = field(default_factory=list)
+    owed: int | None = None  # what is fixed already and not yet paid
 
     @staticmethod
     def opened(builder: Builder, payoff: Payoff) -> Ledger:
@@ -54,9 +55,12 @@ class Ledger:
         ledger.conditions = {event.name: {} for event in payoff.events if event.name}
         return ledger
 
-    def pay(self, pay: Pay, present_value: int, owed: Payment) -> None:
-        add, due = self.builder.emit, owed.due
-        self.payments.append(owed)
+    def pay(self, pay: Pay, present_value: int, payment: Payment, settled: bool = False) -> None:
+        """Enter a payment; `settled`: it is fixed already."""
+        add, due = self.builder.emit, payment.due
+        self.payments.append(payment)
+        if settled:
+            self.owed = present_value if self.owed is None else add(Op.ADD, self.owed, present_value, place=pay.place)
         self.legs[pay.leg] = add(Op.ADD, self.legs[pay.leg], present_value, place=pay.place)
         if self.parts:
             part = pay.part or UNSORTED
@@ -69,7 +73,7 @@ class Ledger:
     def ended(self, day: Day, flag: int, payment: float) -> None:
         """The contract ended on `day` where `flag`; `payment` is when the amount due for it is paid."""
         self._join(self.ends, day, flag)
-        self.lives.append((flag, payment))
+        self.lives.append((flag, max(payment, 0.0)))
 
     def _join(self, flags: dict[Day, int], day: Day, flag: int) -> None:
         flags[day] = self.builder.emit(Op.OR, flags[day], flag) if day in flags else flag
@@ -80,6 +84,7 @@ class Ledger:
         made = [Output.of("price", fold(Op.ADD, self.legs.values()) if self.legs else nothing)]
         made += [Output.of("leg", value, name) for name, value in self.legs.items()]
         made += [Output.of("part", value, name) for name, value in self.parts.items()]
+        made += [Output.of("owed", self.owed)] if self.owed is not None else []
         for name, flags in self.conditions.items():
             ever = fold(Op.OR, flags.values()) if flags else nothing
             made.append(Output.of("condition", ever, name, flag=True))

@@ -70,5 +70,6 @@ def _price(dated: DatedContract, builder: Builder, makeup: Makeup) -> tuple[int,
     """The price of one reading as a value of the tape, and why it cannot be simulated."""
     walk = walked(dated, builder)
     price = walk.outputs[0]
-    watched = drop_dead_code(builder.tape([price])) if dated.watches else Tape((), ())
-    return price.value, walk.faults or conflicts(watched) or unknown_laws(watched, makeup)
+    alone = drop_dead_code(builder.tape([price]))
+    faults = walk.faults or conflicts(alone) or unknown_laws(alone, makeup)
+    return price.value, [*faults, *walk.observations.missing(alone)]

@@ -1,10 +1,10 @@
 """Scores: the derivatives of the log of a path's density by the leaves that its law is made of.
 
 With levels and extremes held where they are, a leaf moves only their density: d/da E f = E f d log p/da, and f may jump
-(the likelihood ratio method: Glasserman 2003, section 7.3). A step moves the logs by drifts m and by L z with a triangular
-factor L of the covariance; with w = L'^-1 z the score by m is w, by L it is w z' - L'^-1, and a log spot is the drift of
-the first step. Of a bridge only what is read has a density: where its extreme is read by one comparison, whether it
-crossed that level, with probability exp(-2 (x0 - b)(x1 - b) / v); else the extreme itself.
+(the likelihood ratio method: Glasserman 2003, section 7.3). A step moves the logs by drifts m and by L z with a
+triangular factor L of the covariance; with w = L'^-1 z the score by m is w, by L it is w z' - L'^-1, and a log spot is
+the drift of the first step. Of a bridge only what is read has a density: where its extreme is read by one comparison,
+whether it crossed that level, with probability exp(-2 (x0 - b)(x1 - b) / v); else the extreme itself.
 
 Every score is appended to a tape under construction as a value, on each path.
 """
@@ -19,6 +19,7 @@ from mcx.tape.ops import Op
 from mcx.tape.program import Leaf, LeafKind, Tape, spot_leaf
 from mcx.tape.steps import Grid
 
+LEAST = 1e-300
 BRIDGES = (Op.BRIDGE_LOW, Op.BRIDGE_HIGH)
 
 
@@ -49,7 +50,8 @@ class Scores:
     first      by leaf; a leaf may have several, which add up
     edges      what comes on top by the log spots
     spots      the whole score by the log spot of each asset
-    second     (d2 p / dx dy) / p for the log spots of each two assets, both orders; for each asset with itself. Where there
+    second     (d2 p / dx dy) / p for the log spots of each two assets, both orders; for each asset with itself. Where
+    there
                are edges it is not complete, and would have no finite variance
     """
 
@@ -208,7 +210,8 @@ class _Scores:
         return by_variance, by_start, None
 
     def _edge(self, number: int, asset: int) -> Edge:
-        """The density of an extreme where it is the start itself, 2 |x1 - x0| / v, if the other end lies on this side."""
+        """The density of an extreme where it is the start itself, 2 |x1 - x0| / v, if the other end lies on this
+        side."""
         emit, constant = self.builder.emit, self.builder.constant
         step = self.tape.instructions[number]
         x0, x1, variance, _ = step.operands
@@ -242,11 +245,12 @@ class _Scores:
         return found if follow(number, lambda level: level) else None
 
     def _undone(self, reader: int, value: int, undo: Callable[[int], int]) -> int | Callable[[int], int] | None:
-        """What a reader of a value says about it: the level that it is compared with, as seen from the bridge; or, for a
-        rising function, how a level of the function is seen from the bridge; None for anything else."""
+        """What a reader of a value says about it: the level that it is compared with, as seen from the bridge; or, for
+        a rising function, how a level of the function is seen from the bridge; None for anything else."""
         emit, step = self.builder.emit, self.tape.instructions[reader]
         if step.op is Op.EXP:
-            return lambda level: undo(emit(Op.LOG, level))
+            least = self.builder.constant(LEAST)  # no level is below it, and its log is a number
+            return lambda level: undo(emit(Op.LOG, emit(Op.MAX, level, least)))
         if len(step.operands) != 2 or step.operands[0] == step.operands[1]:
             return None
         other = step.operands[1] if step.operands[0] == value else step.operands[0]

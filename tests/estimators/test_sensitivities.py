@@ -32,8 +32,9 @@ def test_every_number_has_its_line_and_every_curve_a_whole():
     """Nodes of vols and rates and their sum; forwards by node only, since they have no common unit."""
     _, first, second = lines("units: 10")
     assert [(line.name, line.subject, line.tenor) for line in first] == [
-        ("delta", "harbour", ""), ("delta for 1 %", "harbour", ""), ("vega", "harbour", "6m"), ("vega", "harbour", "1y"),
-        ("vega", "harbour", "all"), ("yield", "harbour", ""), ("delta", "lantern", ""), ("delta for 1 %", "lantern", ""),
+        ("delta", "harbour", ""), ("delta for 1 %", "harbour", ""), ("vega", "harbour", "6m"),
+        ("vega", "harbour", "1y"), ("vega", "harbour", "all"), ("yield", "harbour", ""), ("delta", "lantern", ""),
+        ("delta for 1 %", "lantern", ""),
         ("vega", "lantern", ""), ("forward", "lantern", "1y"), ("forward", "lantern", "2y"), ("rho", "EUR", "1y"),
         ("rho", "EUR", "2y"), ("rho", "EUR", "all"), ("funding", "EUR", ""), ("correlation", "harbour/lantern", "")]
     assert [(line.name, line.subject) for line in second] == [

@@ -22,7 +22,8 @@ def test_a_bump_that_moves_nothing_or_too_far(size: object):
 
 
 @pytest.mark.parametrize(("moves", "what"), [
-    (["-100%"], "stays above 0"), (["-1.5"], "stays above 0"), (["1%", "1%"], "named twice"), (["up"], "are sizes such"),
+    (["-100%"], "stays above 0"), (["-1.5"], "stays above 0"), (["1%", "1%"], "named twice"),
+    (["up"], "are sizes such"),
     ([k / 1000 for k in range(102)], "at most 101")])
 def test_moves_that_make_no_ladder(moves: list, what: str):
     """A spot stays above 0, and each move is named once."""

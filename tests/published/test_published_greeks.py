@@ -65,9 +65,9 @@ def test_printed_greek_is_the_recomputed_one(case: Case):
 def paths(spot: float, payoff: str, estimator: str) -> dict[str, np.ndarray]:
     """Delta, vega and gamma on single paths, without controls: the likelihood ratio's F times the score, and so on.
 
-    The benchmark's gamma is the pathwise derivative of the likelihood ratio's delta, F' S z - F z over S^2 s sqrt(T). The
-    package takes the likelihood ratio of the pathwise delta, (F' S z / s sqrt(T) - F' S) / S^2, and has the difference of
-    the two as a control.
+    The benchmark's gamma is the pathwise derivative of the likelihood ratio's delta, F' S z - F z over S^2 s sqrt(T).
+    The package takes the likelihood ratio of the pathwise delta, (F' S z / s sqrt(T) - F' S) / S^2, and has the
+    difference of the two as a control.
     """
     terms = {"side": "call", "strike": 100, "expiry": "0.2y"}
     if payoff == "digital":
@@ -76,11 +76,11 @@ def paths(spot: float, payoff: str, estimator: str) -> dict[str, np.ndarray]:
                                         f"  harbour: {{spot: {spot}, currency: EUR, yield: 3%, vol: 25%}}\n")
     made, market = ready(text)
     method = next(each for each in methods(made, market, estimator).valid if each.name.startswith(estimator))
-    bound = method.engine.on(market)
+    bound = method.on(market)
     drawn = draws(bound.program, seed=SEED, numbers=np.arange(PATHS)).T
-    values = interpret(method.engine.tape, bound.values, drawn)
+    values = interpret(method.made.tape, bound.values, drawn)
     products = [np.prod([np.broadcast_to(values[k], PATHS) for k in part.factors], axis=0)
-                for part in method.engine.tape.sums]
+                for part in method.made.tape.sums]
 
     class EachPath:
         def sums(self, _):

@@ -119,6 +119,15 @@ def test_continuous_watching_looks_at_what_is_given(tmp_path: Path, between: flo
     assert result.notes == ("harbour is watched all the time; here only the given levels from 0y to 1y were looked at",)
 
 
+@pytest.mark.parametrize(("between", "amount"), [(119.5, 12.5), (120.0, 3.0), (180.0, 3.0)])
+def test_a_barrier_above_looks_at_the_highest(tmp_path: Path, between: float, amount: float):
+    """The highest of the given levels touches it, wherever in the stretch it stands."""
+    levels = written(tmp_path, f"harbour: {{0y: 100, 0.5y: {between}, 1y: 112.5}}", "levels.yaml")
+    up = BARRIER.replace("direction: down", "direction: up").replace("barrier: 90", "barrier: 120")
+    payments = package.readback(written(tmp_path, up), path=levels).path.payments
+    assert [(each.date, each.amount) for each in payments] == [("1y", amount)]
+
+
 def test_both_ends_of_a_watch_are_needed(tmp_path: Path):
     """Without them the stretch is not covered."""
     levels = written(tmp_path, "harbour: {0.5y: 95}", "levels.yaml")

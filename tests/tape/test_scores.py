@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from helpers import document, prepare
-from mcx.estimators.differentiate import without_first_levels
+from mcx.estimators.derivative_tape import without_first_levels
 from mcx.leaves.market_map import MarketMap
 from mcx.tape.builder import Builder
 from mcx.tape.interpret import interpret
@@ -26,8 +26,8 @@ correlation: {harbour/lantern: 40%, harbour/orchard: 20%, lantern/orchard: -30%}
 BARRIER = document("barrier", side="put", direction="down", knock="in", strike=100, barrier=90,
                    watched="{continuous: [0y, 1y]}", expiry="1y")
 LOOKBACK = document("lookback", side="call", strike_type="floating", watched="{continuous: [0y, 1y]}", expiry="1y")
-RAINBOW = document("rainbow_option", "[harbour, lantern, orchard]", side="put", strike="100%", which="worst", expiry="1y",
-                   initial="{harbour: 100, lantern: 95, orchard: 90}")
+RAINBOW = document("rainbow_option", "[harbour, lantern, orchard]", side="put", strike="100%", which="worst",
+                   expiry="1y", initial="{harbour: 100, lantern: 95, orchard: 90}")
 PATHS, SEED = 1 << 17, 0x8F1BBCDC68C4C8A1
 
 
