@@ -280,7 +280,7 @@ def definition(name: str) -> Definition:
 
 
 def blank(name: str, assets: Sequence[str]) -> str:
-    """Contract and market to fill in for a definition, as YAML text; raises RequestError for what does not fit."""
+    """Contract, market and quote to fill in for a definition, as YAML text; raises RequestError for what does not fit."""
     from mcx.checked.values import ASSET
     from mcx.report.blank import blank as fill_in
 

@@ -193,7 +193,7 @@ def readback(files: tuple[str, ...], path: str | None, calendar: bool, as_json: 
 
 @cli.command()
 @click.argument("name", required=False)
-@click.option("--blank", is_flag=True, help="Contract and market to fill in.")
+@click.option("--blank", is_flag=True, help="Contract, market and quote to fill in.")
 @click.option("--assets", metavar="A,B", help="The assets to write into them.")
 @AS_JSON
 def payoffs(name: str | None, blank: bool, assets: str | None, as_json: bool) -> None:

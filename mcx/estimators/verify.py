@@ -159,9 +159,7 @@ class Bench:
             (SAMPLING, gap.half_width), (BID_OFFER, foot.half_width), (INPUTS, band), (TOLERANCE, quote.tolerance)))
         far = corner(self.revaluer, there.market, there.effects, gap.value, self.sampling) if there.effects else None
         threshold = max(foot.half_width or 0.0, quote.tolerance or 0.0)
-        closing = tuple(
-            each.name for each in there.readings.readings
-            if each.differs and _closes(gap, replace(each.price, value=meets - each.price.value), threshold))
+        closing = self.closing(there, gap, meets, threshold)
         solved = None
         if solve:
             solved = solve_term(self.ready.dated, self.market, solve, foot.mid if target is None else target, self.sampling)
@@ -169,6 +167,11 @@ class Bench:
             quote, foot, self.valuation, there.price, gap, bands, there.effects, there.unstated, far,
             tuple(there.implied(lever, meets) for lever in there.levers if lever.kind not in NOT_MOVED),
             there.joint(meets), there.readings, closing, self._money(quote), solved, time.perf_counter() - begun)
+
+    def closing(self, there: Compared, gap: Estimate, meets: float, threshold: float) -> tuple[str, ...]:
+        """The readings in which an open gap would not be there; up to `threshold` nobody calls it one."""
+        return tuple(each.name for each in there.readings.readings
+                     if each.differs and _closes(gap, replace(each.price, value=meets - each.price.value), threshold))
 
     def _money(self, quote: DealerQuote) -> Money:
         discount = self.ready.market.funded_discount

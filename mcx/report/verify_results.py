@@ -214,7 +214,8 @@ class VerifyResult(Result):
     """Whether a dealer's quote can be right: `mcx verify`.
 
     `price` is our price at our spots, `compared` that at the spots of the quote; `mid`, `bid` and `ask` are the quote on
-    our footing. `explained`: some band holds the gap. `solve` and `target` repeat the request.
+    our footing. `explained`: some band holds the gap. `leads` say what closes it: readings, and
+    single inputs inside their stated uncertainty. `solve` and `target` repeat the request.
     """
 
     contract: str
@@ -236,6 +237,7 @@ class VerifyResult(Result):
     gap: Gap
     bands: tuple[BandLine, ...]
     verdict: str
+    leads: tuple[str, ...]
     explained: bool
     inputs: tuple[InputEffect, ...]
     worst_corner: WorstCorner | None

@@ -71,6 +71,7 @@ def verify_result(ready: Ready, market: Market, found: Verification, solve: str,
         gap=Gap(gap.value, gap.standard_error, z if math.isfinite(z) else None, gap.value * contract.size),
         bands=tuple(BandLine(band.name, band.half_width, band.holds) for band in found.bands),
         verdict=verdict(found.bands, gap.value, contract.currency if not percent else ""),
+        leads=tuple(_leads(found)),
         explained=any(band.holds for band in found.bands),
         inputs=tuple(InputEffect(effect.lever.name, effect.lever.subject, min(filter(None, effect.lever.widths)),
                                  effect.change.value, effect.change.standard_error, effect.note) for effect in found.effects),
@@ -113,6 +114,20 @@ def verdict(bands: Sequence[Band], gap: float, currency: str) -> str:
         return f"Nothing that was stated holds the gap of {size}: it is outside {_joined(outside, 'and')}."
     tail = f", outside {_joined(outside, 'and')}" if outside else ""
     return f"The gap of {size} is inside {_joined(inside, 'and')}{tail}."
+
+
+def _leads(found: Verification) -> Iterator[str]:
+    """What closes the gap by itself."""
+    if found.closing:
+        yield f"Read otherwise it would be closed: {_joined(found.closing, 'or')}."
+    elif found.readings.readings:
+        yield "None of the other readings that the definition lists closes it."
+    inside = [f"{implied.lever.name} of {implied.lever.subject}" for implied in found.implied
+              if any(implied.plausible(each) for each in implied.solutions.found)]
+    if inside:
+        yield f"One input inside its stated uncertainty meets the quote: {_joined(inside, 'or')}."
+    else:
+        yield "No single input meets the quote inside its stated uncertainty."
 
 
 def _joined(words: Sequence[str], joint: str) -> str:

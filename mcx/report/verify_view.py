@@ -34,6 +34,7 @@ def show_verification(result: VerifyResult, page: Page) -> None:
     places = scale.places(result.standard_error)
     quote, gap = result.quote, result.gap
     page.line(result.verdict, style="bold")
+    page.items(result.leads)
     page.named((
         ("contract", f"{result.contract} ({result.payoff})"),
         ("quote", f"{quote.dealer}, {quote.at}, {quote.side}, {quote.accrual}, {quote.commitment}"),
@@ -51,6 +52,8 @@ def show_verification(result: VerifyResult, page: Page) -> None:
     page.table(("", "half-width", "holds it"), (
         (band.name, "not stated" if band.half_width is None else scale.show(band.half_width, places),
          ANSWERS[band.holds]) for band in result.bands), last=1)
+    if gap.z is not None:
+        page.line(f"  sampling error: the gap is z = {gap.z:+.1f} standard errors")
     corner = result.worst_corner
     if corner is not None:
         far = "" if corner.share == 1.0 else f" (at {corner.share:.3g} of them: there is no such market further out)"
