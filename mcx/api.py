@@ -159,6 +159,7 @@ def methods(
     made, dated = _dated(files, with_market=True)
     if picture is not None and len(dated) > 1:
         raise RequestError(f"a picture shows one contract; the files hold {len(dated)}")
+    from mcx.estimators.finite import finite
     from mcx.estimators.reduction.comparison import compare
     from mcx.estimators.reduction.scheme import Case
     from mcx.report.method_results import MethodsTable
