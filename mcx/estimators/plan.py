@@ -28,6 +28,8 @@ GROUP = 64  # paths are summed in groups of this size; planned numbers are whole
 FIRST_PILOT = 1 << 14
 LARGEST_PILOT = 1 << 20
 FEWEST_UNLIKE = 100  # paths of a pilot that must differ from the commonest value
+FEWEST_MEANS = 1024
+MOST_GROUPED = 2 * GROUP  # paths in a mean that are no scrambled points: strata of pairs
 FARTHEST = 16  # times its own paths that a pilot of scrambled points plans for
 FEWEST_PLANNED = 1 << 14
 LONGEST_SECONDS = 7 * 86400.0
@@ -149,12 +151,12 @@ def plan(
 def _by_half_width(asked: Precision, pilot: Callable[[int], Independent], pace: float | None) -> Plan:
     """The paths that bring the 95 % half-width below the target, by the upper end of what the variance may be.
 
-    Means of many paths that depend on one another, such as those of scrambled points, spread less the more paths they
-    have, so that the pilot grows while it is much smaller than what it asks for.
+    Means of scrambled points spread less the more points they have, so that the pilot grows while it is much smaller
+    than what it asks for; other means need enough of them for their variance to be known.
     """
     size = FIRST_PILOT
     found = pilot(size)
-    while (_few(found) or found.size > GROUP and size * FARTHEST < _wanted(asked, found)) and size < LARGEST_PILOT:
+    while size < LARGEST_PILOT and (_few(found) or _too_small(asked, found)):
         size *= 4
         found = pilot(size)
     warnings, wanted = [], _wanted(asked, found)
@@ -171,6 +173,12 @@ def _by_half_width(asked: Precision, pilot: Callable[[int], Independent], pace: 
 
 def _few(found: Independent) -> bool:
     return unlike(found.values) < min(FEWEST_UNLIKE, len(found.values) // 4)
+
+
+def _too_small(asked: Precision, found: Independent) -> bool:
+    if found.size > MOST_GROUPED:
+        return found.paths * FARTHEST < _wanted(asked, found)
+    return len(found.values) < FEWEST_MEANS
 
 
 def _wanted(asked: Precision, found: Independent) -> float:

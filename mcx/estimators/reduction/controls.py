@@ -13,7 +13,7 @@ from mcx.tape.program import Output
 def change(case: Case, draft: Draft) -> Draft:
     market = Market(case.ready)  # the first of its stage: the draft's tape is still the contract's
     if not market.days:
-        raise Inapplicable("no level is read after today")
+        raise Inapplicable("no level of a known law is read after today")
     found = {candidate.value: candidate for candidate in (*candidates(market), *watched_candidates(market))}
     outputs = (*draft.tape.outputs, *(Output.of("control", each.value, each.control.name) for each in found.values()))
     return replace(draft, tape=market.builder.tape(outputs), controls=(*draft.controls, *(each.control for each in found.values())))

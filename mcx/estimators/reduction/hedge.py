@@ -34,7 +34,7 @@ def hedged(case: Case, draft: Draft, dates: int | None) -> Draft:
     today the first."""
     market = Market(case.ready)
     if not market.days:
-        raise Inapplicable("no level is read after today, so that there is nothing to hedge")
+        raise Inapplicable("no level of a known law is read after today")
     market.builder = Builder.of(draft.tape)
     assets = sorted({asset for asset, _ in market.days})
     times = trading_times(market, dates)

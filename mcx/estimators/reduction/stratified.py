@@ -17,7 +17,7 @@ from mcx.machine.sizes import GROUP
 def change(case: Case, draft: Draft) -> Draft:
     variances = clock(case.ready.market, case.ready.unrolled.grid)
     if not variances.size:
-        raise Inapplicable("no level is read after today")
+        raise Inapplicable("no level of a known law is read after today")
     return replace(draft, plan=replace(draft.plan, order=bridge(variances), strata=GROUP))
 
 
