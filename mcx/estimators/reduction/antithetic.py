@@ -21,39 +21,46 @@ def change(_: Case, draft: Draft) -> Draft:
 
 
 def paired(tape: Tape) -> Tape:
-    """The tape whose outputs and draws are those of `tape`, each output the mean over a path and its mirror."""
-    builder = Builder.of(tape)
+    """The tape whose outputs and draws are those of `tape`, each output the mean over a path and its mirror.
+
+    Each instruction is followed by its mirror, so that no value has to be kept for long.
+    """
+    builder = Builder()
+    own: list[int] = []
     mirror: list[int] = []
     centres: list[int | None] = []  # the value less its symmetric part, where it is a sum of normals
-    for number, step in enumerate(tape.instructions):
-        operands = tuple(mirror[k] for k in step.operands)
+    for step in tape.instructions:
+        here = builder.copy(step, tuple(own[k] for k in step.operands))
+        there = tuple(mirror[k] for k in step.operands)
         centre = None
         if step.op is Op.NORMAL:
-            image = builder.emit(Op.NEG, number)
+            image = builder.emit(Op.NEG, here)
         elif step.op is Op.UNIFORM:
-            image = builder.emit(Op.SUB, builder.constant(1.0), number)
-        elif operands == step.operands:  # no draw comes into it
-            image = centre = number
+            image = builder.emit(Op.SUB, builder.constant(1.0), here)
+        elif all(own[k] == mirror[k] for k in step.operands):  # no draw comes into it
+            image = centre = here
         elif step.op is Op.STEP and tape.instructions[step.operands[2]].op is Op.NORMAL:
             x, scale, normal = step.operands
-            image = builder.emit(Op.STEP, mirror[x], builder.emit(Op.NEG, scale), normal)
-            centre = centres[x] if mirror[scale] == scale else None
+            image = builder.emit(Op.STEP, mirror[x], builder.emit(Op.NEG, own[scale]), own[normal])
+            centre = centres[x] if mirror[scale] == own[scale] else None
         elif step.op is Op.EXP and centres[step.operands[0]] is not None:
             middle = centres[step.operands[0]]
             square = builder.emit(Op.EXP, builder.emit(Op.ADD, middle, middle))
-            image = builder.emit(Op.DIV, square, number, place=step.place)
+            image = builder.emit(Op.DIV, square, here, place=step.place)
         else:
-            image = builder.emit(step.op, *operands, place=step.place)
+            image = builder.emit(step.op, *there, place=step.place)
             if step.op is Op.ADD:
                 sides = [centres[k] for k in step.operands]
                 centre = None if None in sides else builder.emit(Op.ADD, *sides)
+        own.append(here)
         mirror.append(image)
         centres.append(centre)
     half = builder.constant(0.5)
 
     def mean(value: int) -> int:
-        image = mirror[value]
-        return value if image == value else builder.emit(Op.MUL, half, builder.emit(Op.ADD, value, image))
+        if mirror[value] == own[value]:
+            return own[value]
+        return builder.emit(Op.MUL, half, builder.emit(Op.ADD, own[value], mirror[value]))
 
     outputs = [replace(output, value=mean(output.value), flag=False) for output in tape.outputs]
     return drop_dead_code(builder.tape(outputs, tape.normals, tape.uniforms))
