@@ -100,7 +100,8 @@ def test_seconds(call: Path):
 
 @pytest.mark.parametrize(("options", "said"), [
     (("--paths", "1"), "one path has no error"), (("--paths", "0"), "'paths' is from 2"),
-    (("--paths", "many"), "not a valid integer"), (("--within", "2"), "ask for 'within' in bp or %"),
+    (("--paths", "many"), "not a valid integer"), (("--paths", "1.5e-1"), "not a valid integer"),
+    (("--paths", "1e99"), "'paths' is from 2"), (("--within", "2"), "ask for 'within' in bp or %"),
     (("--within", "nan"), "'within' is a half-width above 0"), (("--seconds", "nan"), "'seconds' is a time above 0"),
     (("--seconds", "-1"), "'seconds' is a time above 0"), (("--seed", "-1"), "'seed' is a whole number from 0"),
     (("--seed", str(2**64)), "'seed' is a whole number from 0"), (("--seed", "1.5"), "not a valid integer"),
@@ -109,6 +110,7 @@ def test_seconds(call: Path):
     (("--paths", "100", "--within", "1bp"), "'paths' and 'within' cannot both decide"),
     (("--paths", "100", "--seconds", "1"), "'paths' and 'seconds' cannot both decide"),
     (("--within", "1bp", "--seconds", "1"), "'within' and 'seconds' cannot both decide"),
+    (("--within", "1e-9bp"), "'within 1e-9 bp' needs about"),
     (("--pats", "100"), "--pats"), (("--paths",), "'--paths' requires an argument"),
 ])
 def test_wrong_options(options: tuple, said: str):

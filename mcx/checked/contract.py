@@ -6,8 +6,8 @@ import datetime
 from dataclasses import dataclass, field
 from typing import TypeAlias
 
-from mcx.checked.payoff import Payoff
-from mcx.faults import Place
+from mcx.checked.payoff import OtherReading, Payoff
+from mcx.faults import Fault, Place
 
 
 @dataclass(frozen=True, slots=True)
@@ -127,6 +127,16 @@ class Known:
 
 
 @dataclass(frozen=True, slots=True)
+class ContractOtherwise:
+    """A contract in another reading of its payoff, None where it cannot be read so, and why. The dates that fall later
+    in that reading are not moved yet."""
+
+    reading: OtherReading
+    contract: Contract | None
+    faults: tuple[Fault, ...] = ()
+
+
+@dataclass(frozen=True, slots=True)
 class Contract:
     """One trade. Exactly one of `notional` and `units` is given. `textbook` contracts use times, others dates.
 
@@ -159,6 +169,7 @@ class Contract:
     at_fault: frozenset[str] = frozenset()
     framed: bool = True
     terms_place: Place | None = None  # where a term that is missing would stand
+    otherwise: tuple[ContractOtherwise, ...] = ()  # in the other readings of its payoff
 
     @property
     def lot(self) -> float:

@@ -14,6 +14,7 @@ from pathlib import Path
 from mcx.checked.contract import Contract
 from mcx.checked.conversions import conversion_faults, conversions, read_conversion, simulated_rates
 from mcx.checked.curves import valuation_of
+from mcx.checked.dealer_quote import TEXTBOOK, DealerQuote, read_quote
 from mcx.checked.fixings import file_of
 from mcx.checked.library import Definitions, clashes, stands_for_shipped
 from mcx.checked.market import Market
@@ -34,12 +35,14 @@ NO_FUNDING = "no issuer funding spread: the amounts are discounted at the market
 @dataclass(frozen=True, slots=True)
 class Request:
     """What was asked about: contracts in order of the files, the market if one was given, the definitions
-    used or given along, and all documents. Beside faults, contracts and market hold what could be read of them."""
+    used or given along, all documents, and the dealers' quotes. Beside faults, contracts and market hold what could be
+    read of them."""
 
     contracts: tuple[Contract, ...]
     market: Market | None
     payoffs: tuple[Document, ...]
     documents: tuple[Document, ...]
+    quotes: tuple[DealerQuote, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -92,6 +95,7 @@ def checked_request(
     faults += _only_one_market(kinds.get("market", []))
     faults += _same_title(kinds.get("contract", []))
     used: dict[str, Document] = {}
+    titled: dict[str, Contract | None] = {}
     contracts: list[Contract] = []
     markets = kinds.get("market", [])
     tables, wrong = _tables(markets, kinds.get("fixings", []))
@@ -108,13 +112,32 @@ def checked_request(
         if market:
             pair = _pair(document.body, markets[0].body, contract, market)
             faults += [fault for check in CROSS_CHECKS for fault in check(pair)]
+        titled[contract.title if contract else text_of(document.body, "contract", [])] = contract
         if contract:
             contracts.append(_with_assumptions(contract, market) if market else contract)
     for document in own:
         if document not in used.values():
             faults += read_payoff(document)[1]
     payoffs = dict.fromkeys((*own, *used.values()))
-    return Request(tuple(contracts), market, tuple(payoffs), documents), sorted(set(faults))
+    quotes, wrong = _quotes(kinds.get("quote", []), titled, market)
+    return Request(tuple(contracts), market, tuple(payoffs), documents, quotes), sorted(set(faults + wrong))
+
+
+def _quotes(
+    documents: list[Document], contracts: dict[str, Contract | None], market: Market | None
+) -> tuple[tuple[DealerQuote, ...], list[Fault]]:
+    """The quotes, each of its own time and for one of the contracts."""
+    found, faults = [], []
+    for document in documents:
+        quote, wrong = read_quote(document, contracts.items())
+        faults += wrong
+        if quote is None:
+            continue
+        if market is not None and (quote.at == TEXTBOOK) != (market.valuation is None):
+            wanted = "a date, as the market is of one" if market.valuation else f"'{TEXTBOOK}', as the market is of time 0"
+            faults.append(Fault(document.body.get("at").place, f"expected {wanted}, found '{quote.at}'"))
+        found.append(quote)
+    return tuple(found), faults
 
 
 def _pair(contract_body: Mapping, market_body: Mapping, contract: Contract | None, market: Market) -> Pair:
@@ -174,7 +197,9 @@ def _with_assumptions(contract: Contract, market: Market) -> Contract:
     conversion, said = conversions(contract.conversion, contract.currency, contract.assets, market)
     if contract.units is not None and contract.currency not in market.funding:
         said = (*said, NO_FUNDING)
-    return replace(contract, conversion=conversion, assumptions=(*contract.assumptions, *said))
+    others = tuple(replace(other, contract=other.contract and replace(other.contract, conversion=conversion))
+                   for other in contract.otherwise)
+    return replace(contract, conversion=conversion, otherwise=others, assumptions=(*contract.assumptions, *said))
 
 
 def conversions_known(pair: Pair) -> list[Fault]:

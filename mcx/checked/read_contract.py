@@ -11,13 +11,14 @@ import datetime
 from collections.abc import Mapping as MappingOf
 from dataclasses import replace
 
-from mcx.checked.contract import BusinessDays, Contract, DayRef, DayRule, Period, TermValue
+from mcx.checked.contract import BusinessDays, Contract, ContractOtherwise, DayRef, DayRule, Period, TermValue
 from mcx.checked.conversions import read_conversion
 from mcx.checked.day_count_names import day_count_name
 from mcx.checked.formula import Formula, Name, walk
-from mcx.checked.payoff import MONEY, MULTIPLES, Assign, Deliver, Pay, Payoff
+from mcx.checked.payoff import MONEY, MULTIPLES, Assign, Deliver, OtherReading, Pay, Payoff
 from mcx.checked.read_history import read_adjustments, read_disruption, read_happened
 from mcx.checked.read_payoff import read_payoff
+from mcx.checked.read_readings import with_start
 from mcx.checked.read_terms import read_terms
 from mcx.checked.reading import (
     check_keys,
@@ -74,7 +75,7 @@ def read_contract(
     textbook = _is_textbook(reader.written)
     _check_times(reader.written, textbook, values, faults)
     _check_keys(body, _is_dated(body, textbook, reader), payoff, frame)
-    return Contract(
+    contract = Contract(
         title=title, currency=currency or "", assets=assets, payoff=_begun(payoff, values), terms=values,
         place=body.get("contract").place, notional=size.get("notional"), units=size.get("units"),
         denomination=denomination, start=start,
@@ -85,7 +86,29 @@ def read_contract(
         terms_place=(terms or body).place,
         at_fault=reader.at_fault,
         framed=not frame and (textbook or (start and settlement and calendar) is not None),
-    ), faults + frame
+    )
+    if not faults and not frame:
+        others = tuple(_otherwise(reading, contract, terms, body.get("start")) for reading in payoff.readings)
+        contract = replace(contract, otherwise=others)
+    return contract, faults + frame
+
+
+def _otherwise(reading: OtherReading, contract: Contract, terms: Mapping, start: Node | None) -> ContractOtherwise:
+    """A sound contract in another reading of its payoff; `terms` as it states them."""
+    faults: list[Fault] = []
+    start = start or Scalar("0y", contract.place)
+    changed = {name: with_start(contract.payoff, node, start) for name, node in reading.values}
+    stated = {key.text: (key, changed.pop(key.text, value)) for key, value in terms.entries}
+    added = ((Scalar(name, node.place), node) for name, node in changed.items())
+    reader = TermReader(contract.payoff, contract.assets, faults)
+    values = reader.read(Mapping((*stated.values(), *added), terms.place), terms.place)
+    _check_times(reader.written, contract.textbook, values, faults)
+    if faults:
+        return ContractOtherwise(reading, None, tuple(faults))
+    # What the contract states may not count in this reading (a strike that the average takes the place of).
+    known = tuple(replace(term, optional=term.name not in values) for term in reading.payoff.terms)
+    payoff = replace(_begun(reading.payoff, values), terms=known)
+    return ContractOtherwise(reading, replace(contract, payoff=payoff, terms=values))
 
 
 def asset_names(node: Node | None, faults: list[Fault]) -> tuple[str, ...]:

@@ -21,6 +21,7 @@ from mcx.estimators.differentiate import Coefficients, Differentiator
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.ladder import Point, Step, grid, ladder, spot_shifts, today, turning
 from mcx.estimators.methods import PATHWISE, Method, methods
+from mcx.estimators.pace import announce, pace
 from mcx.estimators.plan import Plan, Precision, plan
 from mcx.estimators.price import Ready
 from mcx.estimators.revalue import (
@@ -169,8 +170,11 @@ class _Run:
                 self._bound(method).derivatives(replace(self.pilot, paths=max(paths, FEWEST_PATHS)))
             return time.perf_counter() - begun
 
-        found = plan(asked, prices, seconds_for, exact=program.outputs[0] < 0)
-        return replace(found, paths=max(found.paths, FEWEST_PATHS))
+        speed = pace((self._bound(method).program for method in self.methods.valid), self.pilot.threads)
+        found = plan(asked, prices, seconds_for, exact=program.outputs[0] < 0, pace=speed)
+        found = replace(found, paths=max(found.paths, FEWEST_PATHS))
+        announce(found.paths, speed, self.pilot.notice)
+        return found
 
     def _bound(self, method: Method) -> Differentiator:
         """A method's tape on the market as it stands."""

@@ -149,7 +149,7 @@ def show_prices(table: PriceTable, page: Page) -> None:
     """Several contracts: one line each, then what is particular to some, then what holds for all."""
     if table.interrupted:
         page.line("interrupted: the estimates so far", style="bold")
-    page.table(("contract", "", "price", "± 95 %", "currency", "value"), map(_row, table.prices), words=2)
+    page.table(("contract", "unit", "price", "± 95 %", "currency", "value"), map(_row, table.prices))
     page.line("± is the half-width of the 95 % interval, sampling error only; legs, probabilities and checks: one "
               "contract at a time, or --json")
     if table.not_valued:

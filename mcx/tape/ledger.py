@@ -6,12 +6,27 @@ from dataclasses import dataclass, field
 
 from mcx.checked.payoff import Pay, Payoff
 from mcx.dates.dated_contract import Day
+from mcx.faults import Place
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
 from mcx.tape.program import Output
 
 MOST_DAYS = 64  # dates listed one by one; more ends are grouped by year, more conditions are not listed by date
 UNSORTED = "unsorted"
+
+
+@dataclass(frozen=True, slots=True)
+class Payment:
+    """One amount that may be owed: `amount`, not discounted, is paid on `due` where `flag`; both are values of the
+    tape. `decided` is the day of the event that stands at `event` in the definition."""
+
+    leg: str
+    part: str
+    event: Place
+    decided: Day
+    due: Day
+    flag: int
+    amount: int
 
 
 @dataclass(slots=True)
@@ -25,6 +40,7 @@ class Ledger:
     ends: dict[Day, int] = field(default_factory=dict)
     lives: list[tuple[int, float]] = field(default_factory=list)  # flag of the ending, time of its payment
     last_payment: float = 0.0
+    payments: list[Payment] = field(default_factory=list)
     owed: int | None = None  # what is fixed already and not yet paid
 
     @staticmethod
@@ -39,9 +55,11 @@ class Ledger:
         ledger.conditions = {event.name: {} for event in payoff.events if event.name}
         return ledger
 
-    def pay(self, pay: Pay, present_value: int, due: Day, owed: bool = False) -> None:
-        add = self.builder.emit
-        if owed:
+    def pay(self, pay: Pay, present_value: int, payment: Payment, settled: bool = False) -> None:
+        """Enter a payment; `settled`: it is fixed already."""
+        add, due = self.builder.emit, payment.due
+        self.payments.append(payment)
+        if settled:
             self.owed = present_value if self.owed is None else add(Op.ADD, self.owed, present_value, place=pay.place)
         self.legs[pay.leg] = add(Op.ADD, self.legs[pay.leg], present_value, place=pay.place)
         if self.parts:

@@ -17,7 +17,7 @@ from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Occasion, U
 from mcx.faults import Fault, Place
 from mcx.tape.builder import Builder
 from mcx.tape.formulas import Formulas, Scene, Unreadable, Values
-from mcx.tape.ledger import Ledger
+from mcx.tape.ledger import Ledger, Payment
 from mcx.tape.observations import Observations
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
@@ -73,7 +73,7 @@ def unroll(dated: DatedContract, *, nodes: Sequence[float], makeup: Makeup = PLA
     walk.run()
     observed = drop_dead_code(walk.builder.tape(walk.ledger.outputs()))
     missing = [] if given else walk.observations.missing(observed)
-    wrong = walk.faults or conflicts(observed) or _unknown_laws(observed, makeup)
+    wrong = walk.faults or conflicts(observed) or unknown_laws(observed, makeup)
     faults = [*wrong, *walk.observations.unstated.values(), *missing]
     if faults:
         return Unrolled(Tape((), ()), Tape((), ()), Grid((0.0,), ()), {}, (), State(), tuple(sorted(set(faults))))
@@ -92,10 +92,37 @@ def last_read(dated: DatedContract) -> float:
     return max((step.payload.time for step in observed.instructions if isinstance(step.payload, LevelKey)), default=0.0)
 
 
-def _unknown_laws(tape: Tape, makeup: Makeup) -> list[Fault]:
+def unknown_laws(tape: Tape, makeup: Makeup) -> list[Fault]:
     """Continuous watches of an asset with cash dividends that is converted at the rate of the day."""
     return sorted({Fault(step.place, UNKNOWN_SUM) for step in tape.instructions
                    if step.op in (Op.LOW, Op.HIGH) and step.payload.asset in set(makeup.cash) & set(makeup.rates)})
+
+
+@dataclass(frozen=True, slots=True)
+class Walked:
+    """A contract on a tape that may hold others beside it, as values of that tape.
+
+    outputs   all named results but the levels, price first
+    payments  every amount that may be owed, in the order in which it is decided
+    ends      for each day on which the contract may end early, whether it does; at most one of them is true
+    observations  what it observes, and which fixings are missing
+    """
+
+    outputs: tuple[Output, ...]
+    payments: tuple[Payment, ...]
+    ends: dict[Day, int]
+    observations: Observations
+    faults: tuple[Fault, ...]
+
+
+def walked(dated: DatedContract, builder: Builder) -> Walked:
+    """A contract put on a tape under construction, still reading levels. Contracts that share a builder share what
+    they have in common; continuous watches are not checked against each other."""
+    walk = _Walk(dated, builder)
+    walk.run()
+    ledger = walk.ledger
+    return Walked(tuple(ledger.outputs()), tuple(ledger.payments), dict(ledger.ends), walk.observations,
+                  tuple(walk.faults))
 
 
 def _with_last_levels(tape: Tape, assets: Sequence[str]) -> tuple[Tape, dict[str, tuple[int, float]]]:
@@ -133,10 +160,10 @@ class _Branch:
 class _Walk:
     """The state of a contract while its dates are walked: alive flag, running values, ledger, faults."""
 
-    def __init__(self, dated: DatedContract):
+    def __init__(self, dated: DatedContract, builder: Builder | None = None):
         self.dated = dated
         payoff = dated.contract.payoff
-        self.builder = Builder()
+        self.builder = builder or Builder()
         self.observations = Observations(dated, self.builder)
         self.state = State(fixings=self.observations.used)
         self.formulas = Formulas(dated.contract, self.builder, self._observed_level)
@@ -165,6 +192,8 @@ class _Walk:
             for update in moment.updates:
                 self._update(update)
             for number, event in enumerate(moment.events):
+                if self.builder.number(self.alive) == 0.0:  # what stands below it on this day is not reached
+                    break
                 try:
                     self._event(event, moment.events[: number + 1])
                 except Unreadable as trouble:
@@ -274,12 +303,11 @@ class _Walk:
         for action in actions:
             match action:
                 case Deliver():
-                    self._deliver(action, dated.occasion.day, dated.due[action], flag, scene)
+                    self._deliver(action, dated.event.place, dated.occasion.day, dated.due[action], flag, scene)
                     branch.due.append(dated.due[action].time)
                 case Pay():
-                    due = dated.due[action]
-                    amount = self.formulas.one(action.amount, scene)
-                    self._pay(action, amount, day, due, flag)
+                    due, amount = dated.due[action], self.formulas.one(action.amount, scene)
+                    self._pay(action, Payment(action.leg, action.part, dated.event.place, day, due, flag, amount))
                     self._accrue(action, dated.occasion, amount, flag)
                     branch.due.append(due.time)
                 case Assign(values=pairs):
@@ -304,25 +332,26 @@ class _Walk:
         if fixed is not None:
             self.state.accruing.append(Accruing(pay, occasion, since, fixed))
 
-    def _deliver(self, action: Deliver, day: Day, due: Day, flag: int, scene: Scene) -> None:
+    def _deliver(self, action: Deliver, event: Place, day: Day, due: Day, flag: int, scene: Scene) -> None:
         shares = Shares(self.dated.contract, self.formulas, self.observations)
         worth, certain = shares.worth(action, day, due, scene, lambda chosen: self._settled(chosen, day))
         if day.time <= 0.0 and self.builder.number(flag) == 1.0:
             self.state.deliveries += certain
         if worth is not None:
-            self._pay(action, worth, day, due, flag)
+            self._pay(action, Payment(action.leg, action.part, event, day, due, flag, worth))
 
-    def _pay(self, pay: Pay, amount: int, day: Day, due: Day, flag: int) -> None:
+    def _pay(self, pay: Pay, payment: Payment) -> None:
         emit = self.builder.emit
-        fixed = self.formulas.fixed(amount) if day.time <= 0.0 and self.builder.number(flag) == 1.0 else None
+        past = payment.decided.time <= 0.0 and self.builder.number(payment.flag) == 1.0
+        fixed = self.formulas.fixed(payment.amount) if past else None
         if fixed is not None:
-            self.state.payments.append(FixedAmount(pay, day, due, fixed))
-        if due.time < 0.0:  # paid already
+            self.state.payments.append(FixedAmount(pay, payment.decided, payment.due, fixed))
+        if payment.due.time < 0.0:  # paid already
             return
-        discount = self.builder.leaf(Leaf(LeafKind.DISCOUNT, end=due.time))
-        present = emit(Op.MUL, amount, discount, place=pay.place)
-        paid = emit(Op.SELECT, flag, present, self.builder.constant(0.0), place=pay.place)
-        self.ledger.pay(pay, paid, due, owed=fixed is not None)
+        discount = self.builder.leaf(Leaf(LeafKind.DISCOUNT, end=payment.due.time))
+        present = emit(Op.MUL, payment.amount, discount, place=pay.place)
+        paid = emit(Op.SELECT, payment.flag, present, self.builder.constant(0.0), place=pay.place)
+        self.ledger.pay(pay, paid, payment, settled=fixed is not None)
 
     def _merge(self, condition: int, yes: dict[str, Values], no: dict[str, Values]) -> None:
         for name, value in yes.items():

@@ -217,7 +217,8 @@ def test_currency_of_the_asset():
     market = market.replace("correlation:", "fx: {USD per EUR: {spot: 1.1, vol: 8%}}\ncorrelation:")
     assert made(composite, market)[1] == ["b.yaml:9:14: no correlation for 'harbour/USD per EUR', 'quarry/USD per EUR' "
                                           "and 'orchard/USD per EUR'; write 'harbour/USD per EUR: NUMBER%', "
-                                          "'quarry/USD per EUR: NUMBER%' and 'orchard/USD per EUR: NUMBER%' under 'correlation'"]
+                                          "'quarry/USD per EUR: NUMBER%' and 'orchard/USD per EUR: NUMBER%' under "
+                                          "'correlation'"]
     assert made(CONTRACT.replace("currency: EUR", "currency: EUR\nconversion: {harbour: quanto}"), MARKET)[1] == [
         "a.yaml:3:14: 'harbour' is quoted in EUR, the contract's currency: there is nothing to convert"]
 

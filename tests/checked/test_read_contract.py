@@ -179,6 +179,8 @@ SLIPS = [
     ("[harbour, lantern]", "[]", "4:9: expected one asset or more, found a list; the list is empty"),
     ("[harbour, lantern]", "[harbour, lan/tern]",
      "4:19: expected the name of an asset, of letters, digits and . _ - &, found 'lan/tern'"),
+    ("[harbour, lantern]", "[harbour lantern]",
+     "4:10: expected the name of an asset, of letters, digits and . _ - &, found 'harbour lantern'"),
     ("start: 2026-11-16", "start: 16.11.2026",
      "5:8: expected a date such as '2026-11-16', found '16.11.2026'; write '2026-11-16'"),
     ("start: 2026-11-16\n", "", "1:1: 'start' is missing in the contract"),

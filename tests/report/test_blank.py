@@ -132,6 +132,7 @@ def test_from_the_command_line():
     ("exchange_option", "alder", "'exchange_option' takes 2 assets, not 1"),
     ("basket_option", "alder", "'basket_option' takes 2 or more assets, not 1"),
     ("autocall", "alder,alder", "an asset is named twice"), ("autocall", "", "not ''"), ("autocall", "a,,b", "not ''"),
+    ("autocall", "a b,c", "not 'a b'"),
     ("autocall", "a: b", "not 'a: b'"), ("europaen", "alder", "did you mean 'european'?"),
     ("zzz", "a", "'mcx payoffs' lists"),
 ])
