@@ -125,7 +125,9 @@ def _leads(found: Verification) -> Iterator[str]:
         yield "None of the other readings that the definition lists closes it."
     inside = [f"{implied.lever.name} of {implied.lever.subject}" for implied in found.implied
               if any(implied.plausible(each) for each in implied.solutions.found)]
-    if inside:
+    if all(implied.lever.width is None for implied in found.implied):
+        yield "No uncertainty of any input is stated: what an input would have to be cannot be called plausible or not."
+    elif inside:
         yield f"One input inside its stated uncertainty meets the quote: {_joined(inside, 'or')}."
     else:
         yield "No single input meets the quote inside its stated uncertainty."

@@ -10,6 +10,7 @@ from mcx.report.verify_results import NO_EFFECT, NONE_THERE, ImpliedInput, Solve
 
 ANSWERS = {True: "yes", False: "no", None: ""}
 NO_NUMBER = {NONE_THERE: "", NO_EFFECT: "moves nothing"}
+LONGEST_NOTE = 240
 MOST_PAYMENTS = 12  # listed one by one; more are in --json
 IN_PERCENT = ("vol", "yield", "rates", "funding", "correlation")
 
@@ -141,7 +142,12 @@ def _readings(result: VerifyResult, scale: Scale, places: int, page: Page) -> No
         for each in shown), last=1)
     page.items(f"{each.reading}: {each.about}" for each in shown if each.closes_gap)
     unlike = [each for each in result.readings if each not in shown]
-    page.items(f"{each.reading}: {each.note}" for each in unlike)
+    page.items(f"{each.reading}: {_short(each.note)}" for each in unlike)
+
+
+def _short(note: str) -> str:
+    """A note that names many dates, cut; it stands whole in --json."""
+    return note if len(note) <= LONGEST_NOTE else f"{note[:LONGEST_NOTE].rsplit(' ', 1)[0]} … (whole in --json)"
 
 
 def _money(result: VerifyResult, scale: Scale, places: int, page: Page) -> None:
