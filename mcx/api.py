@@ -280,7 +280,7 @@ def definition(name: str) -> Definition:
 
 
 def blank(name: str, assets: Sequence[str]) -> str:
-    """Contract, market and quote to fill in for a definition, as YAML text; raises RequestError for what does not fit."""
+    """Contract, market and quote to fill in for a definition, as YAML; raises RequestError for what does not fit."""
     from mcx.checked.values import ASSET
     from mcx.report.blank import blank as fill_in
 
@@ -352,7 +352,8 @@ def _dated(files: Sequence[File], *, with_market: bool, with_quote: bool = False
     made, faults = checked_request(documents, unread)
     kinds = {document.kind for document in made.documents}
     names = ", ".join(map(str, files))
-    missing = [("contract", CONTRACT_BEGINS), ("market", MARKET_BEGINS), ("quote", QUOTE_BEGINS)][: 1 + with_market + with_quote]
+    wanted = [("contract", CONTRACT_BEGINS), ("market", MARKET_BEGINS), ("quote", QUOTE_BEGINS)]
+    missing = wanted[: 1 + with_market + with_quote]
     for kind, begins in missing:
         if kind not in kinds and not unread:  # else it may stand in what could not be read
             faults.append(Fault(Place(str(files[0]), 1, 1), f"no {kind} in {names}; expected {begins}"))

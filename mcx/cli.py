@@ -163,7 +163,7 @@ def methods(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
 
 @cli.command()
 @FILES
-@click.option("--solve", default="", metavar="TERM", help="At which value of this term is the contract worth the quote?")
+@click.option("--solve", default="", metavar="TERM", help="At which value of this term is it worth the quote?")
 @click.option("--target", metavar="PRICE", help="Solve for this price instead: 99.5%, or money per unit.")
 @sampling
 @AS_JSON

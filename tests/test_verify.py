@@ -20,6 +20,7 @@ from mcx.checked.dealer_quote import DealerQuote
 from mcx.dates.dating import date_contract
 from mcx.estimators.bands import root_of_squares
 from mcx.estimators.batches import Sampling
+from mcx.estimators.estimate import Estimate
 from mcx.estimators.levers import Lever
 from mcx.estimators.plan import Precision
 from mcx.estimators.price import prepare
@@ -56,7 +57,8 @@ def bench_of(request, number: int = 0, paths: int = PATHS, seed: int = SEED, unc
 def read(name: str):
     file, number = CONTRACTS[name]
     text = (EXAMPLES / file).read_text(encoding="utf-8")
-    return request_of(text.replace("watched: {from: 2026-12-02, until: final, every: 1 business day}", "watched: final")), number
+    daily = "watched: {from: 2026-12-02, until: final, every: 1 business day}"
+    return request_of(text.replace(daily, "watched: final")), number
 
 
 @cache
@@ -75,15 +77,16 @@ def levers_of(name: str) -> list[Lever]:
     return [lever for lever in bench(name).at({}).levers if lever.kind in HIDDEN]
 
 
-@pytest.mark.parametrize(("name", "number"), [(name, number) for name in CONTRACTS for number in range(len(levers_of(name)))])
+@pytest.mark.parametrize(("name", "number"), [
+    (name, number) for name in CONTRACTS for number in range(len(levers_of(name)))])
 def test_a_hidden_input_is_found(name: str, number: int):
-    """The dealer holds one input to be another than we do, everything else alike: its value is among the solutions, each
-    of which meets the quote on fresh numbers too."""
+    """The dealer holds one input to be another than we do, everything else alike: its value is among the solutions,
+    each of which meets the quote on fresh numbers too."""
     ours, lever = bench(name), levers_of(name)[number]
     hidden = HIDDEN[lever.kind]
     dealers = ours.revaluer.price(moved(ours.market, lever.shifts(hidden)), Sampling(DEALER, PATHS))[1]
     found = ours.at({}).implied(lever, dealers.value).solutions.found
-    distances = [(each.move - hidden) / math.hypot(each.error, dealers.standard_error / abs(each.slope)) for each in found]
+    distances = [(each.move - hidden) / math.hypot(each.error, dealers.standard_error / each.slope) for each in found]
     assert min(map(abs, distances), default=math.inf) < 4.0, (lever.name, lever.subject, distances)
     assert all(abs(each.z) < 4.0 for each in found)
 
@@ -169,8 +172,8 @@ def test_implied_vol_round_trip():
 
 
 def test_implied_vol_against_the_closed_form():
-    """The vol at which the Black formula gives the price, found by many seeds: within four of its stated errors each, and
-    about 95 % of the time within 1.96 of them."""
+    """The vol at which the Black formula gives the price, found by many seeds: within four of its stated errors each,
+    and about 95 % of the time within 1.96 of them."""
     price = european("call", vol=0.24, **AT)
     truth = brentq(lambda vol: european("call", vol=vol, **AT) - price, 0.01, 1.0, xtol=1e-14)
     distances = []
@@ -236,9 +239,10 @@ def test_what_cannot_be_met_is_none_in_the_range():
 
 def test_two_solutions_between_two_points_of_the_scan():
     """A parabola that dips below 0 for less than a step of the scan: both ends of the dip."""
-    from mcx.estimators.estimate import Estimate
+    def distance(move: float, _: Sampling) -> Estimate:
+        return Estimate((move - 0.512) ** 2 - 1e-6, 1e-9, 1 << 12)
 
-    found = solutions(lambda move, _: Estimate((move - 0.512) ** 2 - 1e-6, 1e-9, 1 << 12), -1.0, 1.0, Sampling(1, 1 << 12)).found
+    found = solutions(distance, -1.0, 1.0, Sampling(1, 1 << 12)).found
     assert [each.move for each in found] == pytest.approx([0.511, 0.513], abs=1e-8)
 
 

@@ -1,8 +1,8 @@
-"""Can a dealer's quote be right? The gap on one footing, what holds it, what would have to be true, other readings of the
-contract, and where the money is.
+"""Can a dealer's quote be right? The gap on one footing, what holds it, what would have to be true, other readings of
+the contract, and where the money is.
 
-Everything but the readings is a revaluation of one tape on the same paths. What is compared is our price at the spots the
-quote was made at; the footing shows what that moves.
+Everything but the readings is a revaluation of one tape on the same paths. What is compared is our price at the spots
+the quote was made at; the footing shows what that moves.
 """
 
 from __future__ import annotations
@@ -61,8 +61,8 @@ class Implied:
 
 @dataclass(frozen=True, slots=True)
 class Joint:
-    """The smallest joint move that meets the quote: each lever by a share of its half-width, `size` their root of squares.
-    `fresh` is the distance from the quote on numbers that were not used to find it."""
+    """The smallest joint move that meets the quote: each lever by a share of its half-width, `size` their root of
+    squares. `fresh` is the distance from the quote on numbers that were not used to find it."""
 
     shares: tuple[tuple[Lever, float], ...]
     size: float
@@ -72,8 +72,8 @@ class Joint:
 
 @dataclass(frozen=True, slots=True)
 class Money:
-    """Where the value lies, in the unit of the price: the certain minimum of all payments on the issuer's curve and, where
-    there is one, the certain maximum; every payment; what the funding spread takes off (None without one)."""
+    """Where the value lies, in the unit of the price: the certain minimum of all payments on the issuer's curve and,
+    where there is one, the certain maximum; every payment; what the funding spread takes off (None without one)."""
 
     floor: Extreme
     most: Extreme
@@ -162,7 +162,8 @@ class Bench:
         closing = self.closing(there, gap, meets, threshold)
         solved = None
         if solve:
-            solved = solve_term(self.ready.dated, self.market, solve, foot.mid if target is None else target, self.sampling)
+            wanted = foot.mid if target is None else target
+            solved = solve_term(self.ready.dated, self.market, solve, wanted, self.sampling)
         return Verification(
             quote, foot, self.valuation, there.price, gap, bands, there.effects, there.unstated, far,
             tuple(there.implied(lever, meets) for lever in there.levers if lever.kind not in NOT_MOVED),
@@ -179,7 +180,8 @@ class Bench:
         margin = None
         if quote.issue_price is not None and life.value > 0.0:
             margin = day_one_margin(quote.issue_price, self.valuation.price, life, self.contract.size)
-        return Money(self.certain.least(discount), self.certain.most(discount), self.certain.payments(), self.funding, margin)
+        found = self.certain
+        return Money(found.least(discount), found.most(discount), found.payments(), self.funding, margin)
 
 
 class Compared:
@@ -243,8 +245,9 @@ class Compared:
     def _as_far_as_it_takes(self, shares: Sequence[tuple[Lever, float]], meets: float) -> Joint | None:
         if not any(share for _, share in shares):
             return None
-        found = solutions(lambda scale, sampling: self.distance(joint_shifts(shares, scale), meets, sampling), 0.0, FURTHEST,
-                          self.bench.sampling, lambda scale: self.possible(joint_shifts(shares, scale))).found
+        found = solutions(
+            lambda scale, sampling: self.distance(joint_shifts(shares, scale), meets, sampling), 0.0, FURTHEST,
+            self.bench.sampling, lambda scale: self.possible(joint_shifts(shares, scale))).found
         if not found:
             return None
         nearest = found[0]

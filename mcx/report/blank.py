@@ -1,4 +1,5 @@
-"""A contract, a market and a quote to fill in for a definition: what is to be written is left empty, with a word about it.
+"""A contract, a market and a quote to fill in for a definition: what is to be written is left empty, with a word about
+it.
 
 Loaded as it is, the text gives a fault for every blank and for nothing else.
 """
