@@ -30,7 +30,8 @@ def implausible(dated: DatedContract, market: MarketMap | None) -> Iterator[str]
             yield from _levels(term, value, dated, market) if market else ()
     yield from _watches(dated)
     if dated.last.time > LONGEST:
-        yield f"the last date is {dated.last}, in {dated.last.time:.0f} years (common practice: up to 30): is that meant?"
+        yield (f"the last date is {dated.last}, in {dated.last.time:.0f} years (common practice: up to 30): is that "
+               f"meant?")
 
 
 def _percent(term: Term, value: Figures) -> Iterator[str]:

@@ -60,7 +60,8 @@ def test_levels_far_from_todays(initial: str, said: list[str], tmp_path: Path):
     assert warned(tmp_path, ("initial: 100", f"initial: {initial}")) == said
 
 
-@pytest.mark.parametrize(("strike", "said"), [("500%", []), ("501%", ["'strike' is 501 % (common practice: up to 500 %): is that meant?"])])
+@pytest.mark.parametrize(("strike", "said"), [
+    ("500%", []), ("501%", ["'strike' is 501 % (common practice: up to 500 %): is that meant?"])])
 def test_large_percentages(strike: str, said: list[str], tmp_path: Path):
     """Above 500 %."""
     assert warned(tmp_path, ("strike: 100%", f"strike: {strike}")) == said
