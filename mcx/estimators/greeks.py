@@ -21,9 +21,18 @@ from mcx.estimators.differentiate import Coefficients, Differentiator
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.ladder import Point, Step, grid, ladder, spot_shifts, today, turning
 from mcx.estimators.methods import PATHWISE, Method, methods
+from mcx.estimators.pace import announce, pace
 from mcx.estimators.plan import Plan, Precision, plan
 from mcx.estimators.price import Ready
-from mcx.estimators.revalue import RATES, Revaluer, central_differences, impossible, second_differences, step_of
+from mcx.estimators.revalue import (
+    IN_PROPORTION,
+    RATES,
+    Revaluer,
+    central_differences,
+    impossible,
+    second_differences,
+    step_of,
+)
 from mcx.estimators.sensitivities import Curvature, Sensitivity, first_order, second_order
 from mcx.estimators.theta import between, theta
 from mcx.leaves.jacobian import Input, inputs, moved, without_derivative
@@ -138,7 +147,7 @@ class _Run:
                 points += self._grid(base)
             except KeyboardInterrupt:
                 self.interrupted = True
-        self.notes += [*between(self.ready.dated), *self._near(values), *self._turning(), *self._unmoved()]
+        self.notes += [*between(self.ready.dated), *self._near(values), *self._turning()]
         return Found(price, tuple(values), tuple(self.refused), tuple(comparison), tuple(self.choices),
                      self.methods.jumps, tuple(rungs), tuple(points), tuple(self.notes), self.plan, self.sampling.seed,
                      time.perf_counter() - begun, self.interrupted)
@@ -161,8 +170,11 @@ class _Run:
                 self._bound(method).derivatives(replace(self.pilot, paths=max(paths, FEWEST_PATHS)))
             return time.perf_counter() - begun
 
-        found = plan(asked, prices, seconds_for, exact=program.outputs[0] < 0)
-        return replace(found, paths=max(found.paths, FEWEST_PATHS))
+        speed = pace((self._bound(method).program for method in self.methods.valid), self.pilot.threads)
+        found = plan(asked, prices, seconds_for, exact=program.outputs[0] < 0, pace=speed)
+        found = replace(found, paths=max(found.paths, FEWEST_PATHS))
+        announce(found.paths, speed, self.pilot.notice)
+        return found
 
     def _bound(self, method: Method) -> Differentiator:
         """A method's tape on the market as it stands."""
@@ -253,12 +265,6 @@ class _Run:
                    f"likelihood ratio's delta grows as the root of that time shrinks, that of its gamma as the time "
                    f"itself does; a ladder of spot moves says more")
 
-    def _unmoved(self) -> Iterator[str]:
-        """A word about numbers of the market that the value hangs on and that have no line."""
-        for name, how in self.contract.conversion.items():
-            numbers = "spot, vol and correlation" if how == "composite" else "vol and correlation"
-            yield f"no sensitivities by the rate of exchange of {name} ({how}): its {numbers} stand where they are"
-
     def _turning(self) -> Iterator[str]:
         """A word about conditions on today's levels that a small move of the spots turns."""
         here, *there = (today(self.revaluer.tape, moved(self.market, spot_shifts(self._moving(), move)), self.contract)
@@ -336,7 +342,7 @@ def _so_many(number: float, unit: str) -> str:
 
 
 def _bumped(number: Input, size: float) -> str:
-    if number.kind in ("spot", "forward"):
+    if number.kind in IN_PROPORTION:
         return f"moved by ±{100 * size:.3g} %"
     step = step_of(number, size)
     return f"moved by ±{1e4 * step:.3g} bp" if number.kind in RATES else f"moved by ±{_so_many(100 * step, 'point')}"

@@ -8,6 +8,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from mcx.checked.contract import Contract
+from mcx.checked.conversions import simulated_rates
 from mcx.checked.market import Market
 from mcx.estimators.batches import Sampling
 from mcx.estimators.derivative_tape import DerivativeTape, derivative_tape, without_first_levels
@@ -27,6 +28,7 @@ PATHWISE, LIKELIHOOD, MIXED = "pathwise", "likelihood ratio", "mixed"
 GAMMAS = {PATHWISE: "likelihood ratio of the pathwise delta", LIKELIHOOD: "second-order likelihood ratio",
           MIXED: "mixed: likelihood ratio of the pathwise delta, second-order where payments jump"}
 ESCROWS = (LeafKind.ESCROW, LeafKind.MEAN_ESCROW)
+ESCROWED_BY = ("rate", "yield", "forward", "dividend", "dividend share", "decrement points")  # what the escrow hangs on
 COMPARED = (Op.LT, Op.LE, Op.EQ, Op.NE)
 SINGULAR = 1e-14  # an own variance below this share of the whole
 MOST_DRAWS = 64  # where every payment is smooth; the variance of a likelihood ratio grows with the steps
@@ -79,8 +81,8 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
     smooth = [payment for payment in paid if not found[payment]]
     places = tuple({(jump.kind, jump.place): jump for payment in jumping for jump in found[payment]}.values())
     leaf_values = dict(zip(tape.leaves, values, strict=True))
-    still = without_own_randomness(leaf_values, contract)
-
+    simulated = (*contract.assets, *simulated_rates(contract.conversion, contract.currency, market))
+    still = without_own_randomness(leaf_values, simulated)
     blended = any(market.assets[name].blend for name in contract.assets)
 
     def by_path(with_basis: Tape) -> np.ndarray:
@@ -98,9 +100,9 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
                                likelihood=likelihood, second=not still, proxy=proxy, levels=levels)
         refusals = {}
         if likelihood and (reason := read_today(tape, known)):
-            refusals["spot"] = reason
+            refusals |= {"spot": reason, "fx spot": reason}
         if compared and not levels:
-            refusals |= {kind: compared for kind in ("rate", "yield", *(("spot",) if blended else ()))}
+            refusals |= {kind: compared for kind in (*ESCROWED_BY, *(("spot",) if blended else ()))}
         if reason := still or second_order_trouble(tape, made, blended):
             refusals["gamma"] = reason
         return Method(name, made, contract, refusals)
@@ -124,8 +126,9 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
     return Methods(tuple(valid), places, reason)
 
 
-def without_own_randomness(values: dict[Leaf, float], contract: Contract) -> str:
-    """Why the paths have no density: an asset that does not move by itself, or as good as not; '' where all do."""
+def without_own_randomness(values: dict[Leaf, float], names: Sequence[str]) -> str:
+    """Why the paths have no density: an asset or a rate of exchange (by `names`) that does not move by itself, or as good
+    as not; '' where all do."""
     variances: dict[tuple[int, float], float] = {}
     for leaf, value in values.items():
         if leaf.kind is LeafKind.FACTOR:
@@ -133,7 +136,7 @@ def without_own_randomness(values: dict[Leaf, float], contract: Contract) -> str
     for leaf, value in values.items():
         if leaf.kind is LeafKind.FACTOR and leaf.asset == leaf.other:
             if value**2 <= SINGULAR * variances[leaf.asset, leaf.end]:
-                return (f"{contract.assets[leaf.asset]} has no randomness of its own between {leaf.start:.6g}y and "
+                return (f"{names[leaf.asset]} has no randomness of its own between {leaf.start:.6g}y and "
                         f"{leaf.end:.6g}y: no vol there, or a singular correlation matrix")
     return ""
 
