@@ -127,8 +127,8 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
 
 
 def without_own_randomness(values: dict[Leaf, float], names: Sequence[str]) -> str:
-    """Why the paths have no density: an asset or a rate of exchange (by `names`) that does not move by itself, or as good
-    as not; '' where all do."""
+    """Why the paths have no density: an asset or a rate of exchange (by `names`) that does not move by itself, or as
+    good as not; '' where all do."""
     variances: dict[tuple[int, float], float] = {}
     for leaf, value in values.items():
         if leaf.kind is LeafKind.FACTOR:
