@@ -14,7 +14,7 @@ from dataclasses import replace
 from mcx.checked.market import Market
 from mcx.dates.dated_contract import DatedContract, Moment
 from mcx.estimators.batches import Batches, Sampling
-from mcx.estimators.price import Ready
+from mcx.estimators.ready import Ready
 from mcx.estimators.revalue import Revaluer
 from mcx.tape.state import State
 from mcx.tape.unroll import unroll

@@ -42,7 +42,7 @@ def _lines(dated: DatedContract, state: State | None) -> Iterator[tuple[float, C
         for each in moment.events:
             actions = settled.actions(each.event)
             if each.event.condition is not None and actions:
-                yield line(moment.day, "decision", event_label(each.event, contract.payoff))
+                yield line(moment.day, "decision", event_label(each.event))
             for action in actions:
                 if action in each.due:
                     payments[each.due[action], action.leg] = None

@@ -64,7 +64,7 @@ def _conditions(
         for each in moment.events:
             if each.event.condition is not None and each.event.place not in told:
                 told.add(each.event.place)
-                label = event_label(each.event, dated.contract.payoff)
+                label = event_label(each.event)
                 yield label, str(moment.day), settled.formula(each.event.condition), each.occasion
 
 

@@ -33,9 +33,15 @@ def show_readback(result: Readback, page: Page) -> None:
     page.table(("date", "no.", "what", "terms of the date", "paid on"), (
         (line.date, str(line.nth) if line.nth else "", line.what, line.terms, line.paid) for line in result.dates),
         words=5)
+    if result.warnings:
+        page.heading("warnings")
+        page.items(result.warnings)
     if result.assumptions:
         page.heading("assumptions")
         page.items(result.assumptions)
+    if result.quotes:
+        page.heading("the market today")
+        page.named((quote.name, quote.text) for quote in result.quotes)
     if result.market:
         _market(result.market, page)
     if result.state:

@@ -124,14 +124,26 @@ class Planned(Result):
 
 
 @dataclass(frozen=True, slots=True)
+class HedgeLine(Result):
+    """What a hedger is left with who trades on `dates` dates, today included (0: without a hedge): the standard deviation
+    of the discounted value less the hedge's gains, in the unit of the price, and its standard error."""
+
+    dates: int
+    deviation: float
+    standard_error: float
+
+
+@dataclass(frozen=True, slots=True)
 class PriceResult(Result):
     """What a contract is worth: `mcx price`.
 
     `notional` or `units` is None. `valuation` is None for textbook markets. `ends` holds how often the contract ended
     early on each date, `reached_maturity` how often it did not, and `expected_life` the years to the payment that ends
-    it. `owed` are amounts that fixings have settled and that are not yet paid; they are part of the price, which is
-    dirty: `accrued` is the interest of certain coupons in their running period, and `clean` the price less that.
-    `ended` is the date on which the contract has ended already, '' where it lives. `warnings` are about this run,
+    it. `reduction` lists the methods of variance reduction, 'none' without, `reduction_notes` what they found;
+    `paths` counts both paths of a pair. `hedge` is empty unless gains of a hedge are among the methods. `owed` are
+    amounts that fixings have settled and that are not yet paid; they are part of the price, which is dirty: `accrued` is
+    the interest of certain coupons in their running period, and `clean` the price less that. `ended` is the date on which
+    the contract has ended already, '' where it lives. `warnings` are about this run and about what looks like a slip,
     `assumptions` what was taken as given, `limits` what the model leaves out, `cautions` how the number may be used.
     """
 
@@ -151,6 +163,8 @@ class PriceResult(Result):
     seconds: float
     seed: int
     reduction: str
+    reduction_notes: tuple[str, ...]
+    hedge: tuple[HedgeLine, ...]
     interrupted: bool
     planned: Planned
     legs: tuple[Amount, ...]
@@ -197,7 +211,7 @@ class TermLine(Result):
 
 @dataclass(frozen=True, slots=True)
 class Sentence(Result):
-    """What a `let` name or a running value means."""
+    """What a name means: a `let` name, a running value, a quote of the market."""
 
     name: str
     text: str
@@ -286,9 +300,9 @@ class PathResult(Result):
 
 @dataclass(frozen=True, slots=True)
 class Readback(Result):
-    """What a contract says: `mcx readback`. `market` is empty without a market, `path` None without given
-    levels, `state` (a `StateView`) None without a dated
-    market."""
+    """What a contract says: `mcx readback`. `warnings` are about what looks like a slip; `quotes` (spots, correlations,
+    funding) and `market` are empty without a market, `path` None without given levels, `state` (a `StateView`) None
+    without a dated market."""
 
     contract: str
     payoff: str
@@ -300,7 +314,9 @@ class Readback(Result):
     events: tuple[EventLine, ...]
     watches: tuple[WatchLine, ...]
     dates: tuple[DateLine, ...]
+    warnings: tuple[str, ...]
     assumptions: tuple[str, ...]
+    quotes: tuple[Sentence, ...]
     market: tuple[MarketDate, ...]
     path: PathResult | None
     state: Result | None

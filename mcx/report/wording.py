@@ -84,7 +84,7 @@ class Words:
             case None:
                 return "not stated"
             case Word(text=text):
-                return {"true": "yes", "false": "no"}.get(text, text) if term.type == "flag" else text
+                return text
             case Figures():
                 return self.figures(term, value)
             case LevelFixing(how=how):
