@@ -35,25 +35,25 @@ def fitted(case: Case, names: tuple[str, ...], draft: Draft) -> Scheme:
     pilot say anything about the coefficients."""
     outputs = case.ready.unrolled.tape.outputs
     if not draft.controls:
-        return Scheme(names, case.ready.lowered(draft.tape), draft.plan, draft.each, notes=draft.notes)
+        return Scheme(names, case.ready.lowered(draft.tape), each=draft.each, notes=draft.notes)
     wanted = [number for number, output in enumerate(outputs) if output.kind in CONTROLLED]
     tape = replace(draft.tape, outputs=tuple(draft.tape.outputs[k] for k in (*wanted, *range(len(outputs), _size(draft)))))
     values = _pilot(case, tape, len(draft.controls))
     targets, candidates = values[: len(wanted)].T, values[len(wanted) :].T
-    plain = cost(case.ready.lowered(_without_controls(draft.tape, len(outputs))), draft.plan)
+    plain = cost(case.ready.lowered(_without_controls(draft.tape, len(outputs))))
     costs = Costs(plain, MULTIPLY_AND_SUBTRACT * len({draft.tape.outputs[k].value for k in wanted}),
                   *_own_work(draft.tape, len(outputs)))
     chosen = chosen_controls(targets[:, 0], candidates, draft.controls, costs)
     if not len(chosen) and not any(control.asked for control in draft.controls):  # the methods do without
         whole = _without_controls(draft.tape, len(outputs))
-        return Scheme(names, case.ready.lowered(whole), draft.plan, draft.each, len(values.T) * draft.each, draft.notes)
+        return Scheme(names, case.ready.lowered(whole), each=draft.each, fit_paths=len(values.T) * draft.each, notes=draft.notes)
     if not len(chosen):
         raise Inapplicable("no control lowers variance times cost")
     betas = coefficients(targets, candidates[:, chosen])
     taken = [draft.controls[k] for k in chosen]
     whole = controlled(draft.tape, len(outputs), wanted, chosen, taken, betas)
     notes = (*draft.notes, _listed([control.name for control in taken]))
-    return Scheme(names, case.ready.lowered(whole), draft.plan, draft.each, len(values.T) * draft.each, notes)
+    return Scheme(names, case.ready.lowered(whole), each=draft.each, fit_paths=len(values.T) * draft.each, notes=notes)
 
 
 def _listed(names: list[str]) -> str:
