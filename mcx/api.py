@@ -53,8 +53,8 @@ def price(
     At most one of `paths`, `within` (a 95 % half-width: '2bp' or '0.02%' of the notional, '0.01' money per unit) and
     `seconds` decides the number of paths; without any it is 2^20. `seed` None is 1. `threads` None takes all; it
     changes no digit. `reduction` lists methods of variance reduction, parted by commas ('antithetic,controls'), or is
-    'none', or 'auto' for the choice of a short pilot. `record` names a file to write a valuation record to. `notice` is called with a sentence when
-    kernels must be compiled. Raises InputError, RequestError, Refusal.
+    'none', or 'auto' for the choice of a short pilot. `record` names a file to write a valuation record to.
+    `notice` is called with a sentence when kernels must be compiled. Raises InputError, RequestError, Refusal.
     """
     from mcx.estimators.plan import DEFAULT_SEED, check_fits, precision
     from mcx.estimators.reduction.names import wished
@@ -452,5 +452,5 @@ def _reduction(reduction: str) -> None:
     from mcx.estimators.reduction.names import wished
 
     if wished(reduction):
-        raise RequestError(f"the variance reduction of sensitivities is 'none', not {reduction!r}: their estimators choose "
-                           f"their own controls")
+        raise RequestError(f"the variance reduction of sensitivities is 'none', not {reduction!r}: their estimators "
+                           f"choose their own controls")

@@ -159,8 +159,8 @@ def _by_half_width(asked: Precision, pilot: Callable[[int], Independent]) -> Pla
     warnings, wanted = [], _wanted(asked, found)
     if _few(found):
         warnings.append(f"of {len(found.values):,} {'pilot paths' if found.size == 1 else 'means of pilot paths'} only "
-                        f"{unlike(found.values)} differed from the rest: the number of paths for the precision asked for "
-                        f"cannot be planned well")
+                        f"{unlike(found.values)} differed from the rest: the number of paths for the precision asked "
+                        f"for cannot be planned well")
         wanted = max(wanted, found.paths)
     paths = whole_groups(min(max(wanted, FEWEST_PLANNED), MOST_PATHS))
     return Plan(paths, found.paths, asked.words, asked.within, tuple(warnings))

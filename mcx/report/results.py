@@ -112,8 +112,8 @@ class Planned(Result):
 
 @dataclass(frozen=True, slots=True)
 class HedgeLine(Result):
-    """What a hedger is left with who trades on `dates` dates, today included (0: without a hedge): the standard deviation
-    of the discounted value less the hedge's gains, in the unit of the price, and its standard error."""
+    """What a hedger is left with who trades on `dates` dates, today included (0: without a hedge): the standard
+    deviation of the discounted value less the hedge's gains, in the unit of the price, and its standard error."""
 
     dates: int
     deviation: float
@@ -127,7 +127,8 @@ class PriceResult(Result):
     `notional` or `units` is None. `valuation` is None for textbook markets. `ends` holds how often the contract ended
     early on each date, `reached_maturity` how often it did not, and `expected_life` the years to the payment that ends
     it. `reduction` lists the methods of variance reduction, 'none' without, `reduction_notes` what they found;
-    `paths` counts both paths of a pair. `hedge` is empty unless gains of a hedge are among the methods. `warnings` are about this run, `assumptions` what was taken as given, `limits` what the model leaves out,
+    `paths` counts both paths of a pair. `hedge` is empty unless gains of a hedge are among the methods.
+    `warnings` are about this run, `assumptions` what was taken as given, `limits` what the model leaves out,
     `cautions` how the number may be used.
     """
 

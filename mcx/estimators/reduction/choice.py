@@ -1,7 +1,7 @@
 """`auto`: the methods with the smallest variance times cost in a short pilot.
 
-Costs come from the fixed table of `machine/sizes.py`, never from a clock, so that one seed has one answer. The pilot has
-a stream of its own. Scrambled points are judged by what they do on as few points as the pilot has; on more they do
+Costs come from the fixed table of `machine/sizes.py`, never from a clock, so that one seed has one answer. The pilot
+has a stream of its own. Scrambled points are judged by what they do on as few points as the pilot has; on more they do
 better, so that the choice errs on the side of plain sampling.
 """
 
