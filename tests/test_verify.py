@@ -17,7 +17,7 @@ from helpers import request_of
 from scipy.optimize import brentq
 
 from mcx.checked.dealer_quote import DealerQuote
-from mcx.dates.dating import date_contract
+from mcx.dates.dating import date_on
 from mcx.estimators.bands import root_of_squares
 from mcx.estimators.batches import Sampling
 from mcx.estimators.estimate import Estimate
@@ -48,7 +48,7 @@ def bench_of(request, number: int = 0, paths: int = PATHS, seed: int = SEED, unc
     if uncertainty is not None:
         quoted = next(iter(market.assets.values())).spot
         market = replace(market, uncertainty={key: replace(quoted, value=width) for key, width in uncertainty.items()})
-    dated, faults = date_contract(request.contracts[number], market.valuation)
+    dated, faults = date_on(request.contracts[number], market)
     ready, refused = prepare(dated, market)
     assert not faults and not refused
     return Bench(ready, market, Precision(paths=paths), seed=seed)
