@@ -25,7 +25,7 @@ from mcx.estimators.levers import Lever
 from mcx.estimators.plan import Precision
 from mcx.estimators.price import prepare
 from mcx.estimators.readings import value_readings
-from mcx.estimators.roots import solutions
+from mcx.estimators.roots import SCANNED, solutions
 from mcx.estimators.verify import Bench
 from mcx.faults import Place
 from mcx.leaves.jacobian import moved
@@ -270,3 +270,12 @@ def test_a_term_is_solved():
     assert abs(there.value - 1.0) < 4.0 * math.hypot(there.standard_error, each.error * each.slope)
     years = ours.ready.dated  # the coupon's slope is the annuity, known without simulation
     assert each.slope == pytest.approx(sum(1.0 for _ in years.schedules["coupon_dates"]) / 4, rel=0.1)
+
+
+def test_more_paths_may_move_a_solution_out_of_its_stretch():
+    """What the first paths find at 0.05, all of them find several steps of the scan away; and only once."""
+    def distance(move: float, sampling: Sampling) -> Estimate:
+        return Estimate(move - (0.05 if sampling.paths <= SCANNED else 0.47), 0.1, sampling.paths)
+
+    found = solutions(distance, -1.0, 1.0, Sampling(1, 2 * SCANNED)).found
+    assert [each.move for each in found] == pytest.approx([0.47], abs=1e-8)
