@@ -279,3 +279,12 @@ def test_more_paths_may_move_a_solution_out_of_its_stretch():
 
     found = solutions(distance, -1.0, 1.0, Sampling(1, 2 * SCANNED)).found
     assert [each.move for each in found] == pytest.approx([0.47], abs=1e-8)
+
+
+def test_a_solution_near_the_end_of_the_range_that_only_all_paths_see():
+    """The first paths would have it just outside."""
+    def distance(move: float, sampling: Sampling) -> Estimate:
+        return Estimate(move - (1.02 if sampling.paths <= SCANNED else 0.97), 0.1, sampling.paths)
+
+    found = solutions(distance, -1.0, 1.0, Sampling(1, 2 * SCANNED)).found
+    assert [each.move for each in found] == pytest.approx([0.97], abs=1e-8)

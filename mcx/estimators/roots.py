@@ -82,7 +82,7 @@ def solutions(
     if np.ptp(values) == 0.0:
         return Solutions((), low, high, moves_price=False)
     found = []
-    for left, right in _brackets(grid, values, first, whole):
+    for left, right in (*_brackets(grid, values, first, whole), *_at_the_ends(grid, values, first, whole)):
         root = _refined((left, right), (low, high), first, whole)
         if root is not None and all(abs(root[0] - other.move) > SAME * (high - low) for other in found):
             found.append(_solution(*root, distance, whole))
@@ -116,6 +116,16 @@ def _brackets(grid: np.ndarray, values: np.ndarray, at: _Points, whole: _Points)
             if turn.fun < 0.0 or near and sign * whole(turn.x) < 0.0:
                 yield float(grid[number - 1]), float(turn.x)
                 yield float(turn.x), float(grid[number + 1])
+
+
+def _at_the_ends(
+    grid: np.ndarray, values: np.ndarray, at: _Points, whole: _Points
+) -> Iterator[tuple[float, float]]:
+    """The outermost stretches where only all paths see the sign change before the range ends."""
+    for end, next_to_it in ((0, 1), (-1, -2)):
+        near = abs(values[end]) < DOUBT * at.estimate(grid[end]).standard_error
+        if near and values[end] * values[next_to_it] > 0.0 and values[end] * whole(grid[end]) < 0.0:
+            yield tuple(sorted((float(grid[end]), float(grid[next_to_it]))))
 
 
 def _refined(
