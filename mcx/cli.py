@@ -136,8 +136,8 @@ def greeks(files: tuple[str, ...], as_json: bool, ladder: bool, grid: bool, spot
 
     if vol_moves is not None and not grid or spot_moves is not None and not (ladder or grid):
         raise click.UsageError("'--spot-moves' goes with '--ladder' or '--grid', '--vol-moves' with '--grid'")
-    moves = {"spot_moves": spot_moves or MOVES if ladder or grid else (),
-             "vol_moves": vol_moves or MOVES if grid else ()}
+    moves = {"spot_moves": (MOVES if spot_moves is None else spot_moves) if ladder or grid else (),
+             "vol_moves": (MOVES if vol_moves is None else vol_moves) if grid else ()}
     with _progress() as (progress, notice):
         result = api.greeks(*files, progress=progress, notice=notice, **moves, **wishes)
     _show(result, as_json, _greeks_view)
@@ -146,13 +146,32 @@ def greeks(files: tuple[str, ...], as_json: bool, ladder: bool, grid: bool, spot
 
 @cli.command()
 @FILES
-@click.option("--path", type=click.Path(), help="Levels (YAML or CSV) to run through the contract.")
+@click.option("--solve", default="", metavar="TERM", help="At which value of this term is the contract worth the quote?")
+@click.option("--target", metavar="PRICE", help="Solve for this price instead: 99.5%, or money per unit.")
+@sampling
 @AS_JSON
-def readback(files: tuple[str, ...], path: str | None, as_json: bool) -> None:
+@click.option("--record", type=click.Path(), help="Write a valuation record to this new file.")
+def verify(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
+    """Can the dealer's quote be right? The gap, what holds it, and what would have to be true."""
+    from mcx import api
+
+    with _progress() as (progress, notice):
+        result = api.verify(*files, progress=progress, notice=notice, **wishes)
+    _show(result, as_json, _verify_view)
+    if not result.explained:
+        sys.exit(NO)
+
+
+@cli.command()
+@FILES
+@click.option("--path", type=click.Path(), help="Levels (YAML or CSV) to run through the contract.")
+@click.option("--calendar", is_flag=True, help="Fixings, decisions and payments to come, of all contracts.")
+@AS_JSON
+def readback(files: tuple[str, ...], path: str | None, calendar: bool, as_json: bool) -> None:
     """What does the contract say? Plain sentences, and every date."""
     from mcx import api
 
-    _show(api.readback(*files, path=path), as_json, _readback_view)
+    _show(api.readback(*files, path=path, calendar=calendar), as_json, _calendar_view if calendar else _readback_view)
 
 
 @cli.command()
@@ -281,6 +300,13 @@ def _greeks_view(result: Result, page: Page) -> None:
         show_greeks(each, page)
 
 
+def _verify_view(result: Result, page: Page) -> None:
+    from mcx.report.verify_results import VerifyTable
+    from mcx.report.verify_view import show_verification, show_verifications
+
+    (show_verifications if isinstance(result, VerifyTable) else show_verification)(result, page)
+
+
 def _readback_view(result: Result, page: Page) -> None:
     from mcx.report.readback_view import show_readback
     from mcx.report.results import ReadbackTable
@@ -289,6 +315,12 @@ def _readback_view(result: Result, page: Page) -> None:
         if number:
             page.line()
         show_readback(each, page)
+
+
+def _calendar_view(result: Result, page: Page) -> None:
+    from mcx.report.readback_view import show_calendar
+
+    show_calendar(result, page)
 
 
 def _library_view(result: Result, page: Page) -> None:

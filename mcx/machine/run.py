@@ -23,6 +23,7 @@ class Stream(IntEnum):
 
     MAIN = 0
     PILOT = 1
+    FRESH = 2
     REPLICATE = 1 << 16
 
 

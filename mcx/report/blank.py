@@ -9,7 +9,7 @@ from collections.abc import Iterator, Sequence
 from itertools import combinations
 
 from mcx.checked.formula import Formula, Name, walk
-from mcx.checked.payoff import MONEY, MULTIPLES, Payoff, Term
+from mcx.checked.payoff import MONEY, MULTIPLES, Deliver, Payoff, Term
 from mcx.report.settled import right_sides
 from mcx.report.wording import figure
 
@@ -58,6 +58,8 @@ def _contract(payoff: Payoff, assets: Sequence[str]) -> Iterator[str]:
     yield f"contract: New {payoff.name.replace('_', ' ')} on {' and '.join(assets)}"
     yield _line("currency", about="as EUR")
     yield _line(*SIZES[payoff.pays])
+    if any(isinstance(action, Deliver) for event in payoff.events for action in (*event.then, *event.otherwise)):
+        yield _line("denomination", about="nominal amount of one note: only whole shares of it are delivered")
     yield f"assets: [{', '.join(assets)}]"
     yield _line("start", about="date from which periods and years count")
     if _uses_period(payoff):

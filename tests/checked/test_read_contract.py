@@ -202,7 +202,7 @@ SLIPS = [
     ("holidays: ECB, ", "", "8:11: 'holidays' is missing in the calendar"),
     ("payoff: sampler", "payoff: sampller", "9:9: there is no payoff 'sampller'; did you mean 'sampler'?"),
     ("day_count: 30/360", "day_count: 30/360\nhappened: {hit: true}",
-     "7:1: 'happened' is a key of a later version and is refused rather than ignored"),
+     "7:17: expected what happened by date, as 'hit: {2027-03-04: true}', found 'true'"),
     # terms by name
     ("  side: call\n", "", "11:3: 'side' is missing in the terms of 'sampler'"),
     ("  side: call", "  syde: call",

@@ -11,7 +11,7 @@ from front_door import CALL, EXAMPLES, MARKET, SEED
 from helpers import request_of
 
 from mcx.checked.load import load
-from mcx.dates.dating import date_contract
+from mcx.dates.dating import date_on
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.plan import FEWEST_PLANNED, FIRST_PILOT, precision
 from mcx.estimators.price import Ready, Valuation, prepare, value
@@ -30,7 +30,7 @@ events:
 
 
 def ready_of(request, number: int = 0) -> Ready:
-    dated, faults = date_contract(request.contracts[number], request.market.valuation)
+    dated, faults = date_on(request.contracts[number], request.market)
     assert not faults
     found, faults = prepare(dated, request.market)
     assert not faults

@@ -19,7 +19,7 @@ from mcx.text.documents import parse_documents
 ASSETS = ("alder", "birch", "cedar")
 EMPTY = re.compile(r"( *)([\w./]+):\s*(#.*)?")
 OPTIONAL = re.compile(r"( *)# (\w+):\s*# optional;.*")
-HEAD = {"currency": "EUR", "notional": "1000000", "units": "10", "start": "2026-12-01", "day_count": "30/360",
+HEAD = {"currency": "EUR", "notional": "1000000", "units": "10", "denomination": "1000", "start": "2026-12-01", "day_count": "30/360",
         "settlement": "2 business days", "holidays": "ECB", "roll": "modified following", "market": "2026-12-01",
         "rates": "{EUR: {1y: 2%, 3y: 2.5%}}", "funding": "{EUR: 80 bp}", "spot": "100", "yield": "2%", "vol": "20%"}
 BY_TYPE = {"number": "1", "percent": "80%", "level": "100", "watch": "2028-12-01", "flag": "true", "date": "2028-12-01",
