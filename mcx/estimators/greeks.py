@@ -23,8 +23,9 @@ from mcx.estimators.estimate import Estimate
 from mcx.estimators.ladder import Point, Step, grid, ladder, spot_shifts, today, turning
 from mcx.estimators.methods import PATHWISE, Method, methods
 from mcx.estimators.pace import announce, pace
-from mcx.estimators.plan import Plan, Precision, plan
-from mcx.estimators.price import Ready, refined
+from mcx.estimators.plan import Independent, Plan, Precision, plan
+from mcx.estimators.price import refined
+from mcx.estimators.ready import Ready
 from mcx.estimators.revalue import (
     IN_PROPORTION,
     RATES,
@@ -157,7 +158,7 @@ class _Run:
                 points += self._grid(base)
             except KeyboardInterrupt:
                 self.interrupted = True
-        self.notes += [*between(self.ready.dated), *self._near(values), *self._turning()]
+        self.notes += [*between(self.ready.dated, self.ready.unrolled.state), *self._near(values), *self._turning()]
         return Found(price, tuple(values), tuple(self.refused), tuple(comparison), tuple(self.choices),
                      self.methods.jumps, tuple(rungs), tuple(points), tuple(self.notes), self.plan, self.sampling.seed,
                      time.perf_counter() - begun, self.ready, self.refinement, self.interrupted)
@@ -187,7 +188,7 @@ class _Run:
                 self._bound(method).derivatives(replace(self.pilot, paths=max(paths, FEWEST_PATHS)))
             return time.perf_counter() - begun
 
-        found = plan(asked, self._prices, seconds_for, exact=self.ready.program.outputs[0] < 0, pace=self._pace())
+        found = plan(asked, lambda paths: Independent(self._prices(paths)), seconds_for, exact=self.ready.program.outputs[0] < 0, pace=self._pace())
         return replace(found, paths=max(found.paths, FEWEST_PATHS))
 
     def _pace(self) -> float:

@@ -9,34 +9,22 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from mcx.checked.market import Market
-from mcx.dates.dated_contract import DatedContract
 from mcx.estimators.bracket import PILOT, Refinement, refine
-from mcx.estimators.estimate import NORMAL_95, Estimate, estimates
+from mcx.estimators.estimate import NORMAL_95, Estimate
 from mcx.estimators.pace import announce, pace
-from mcx.estimators.plan import FEWEST_PATHS, GROUP, Plan, Precision, plan, whole_groups
-from mcx.faults import Fault
-from mcx.leaves.market_map import MarketMap
-from mcx.machine.run import BlockSums, Notice, Stream, load_kernels, run, values_by_path
-from mcx.tape.program import Output, Program
-from mcx.tape.registers import lower
-from mcx.tape.unroll import Unrolled, unroll
-
-SHARES = (4, 2)  # the price is also noted at a quarter and at half of the paths
+from mcx.estimators.plan import GROUP, Plan, Precision, plan, whole_groups
+from mcx.estimators.ready import Ready, made
+from mcx.estimators.reduction.catalogue import scheme_of
+from mcx.estimators.reduction.choice import best
+from mcx.estimators.reduction.hedge import HEDGE
+from mcx.estimators.reduction.names import AUTO
+from mcx.estimators.reduction.residual import Residual, residuals
+from mcx.estimators.reduction.sample import Sampler
+from mcx.estimators.reduction.scheme import Case, Scheme
+from mcx.machine.run import Notice, Stream, load_kernels, values_by_path
+from mcx.tape.program import Output
 
 Progress = Callable[[int, int, float], None]  # paths done, paths planned, standard error of the price so far
-
-
-@dataclass(frozen=True, slots=True)
-class Ready:
-    """A dated contract on a market, as a program that can be run; `pieces`: how far its steps are refined
-    (`estimators.bracket`)."""
-
-    dated: DatedContract
-    market: MarketMap
-    unrolled: Unrolled
-    program: Program
-    pieces: int = 1
 
 
 @dataclass(frozen=True, slots=True)
@@ -44,8 +32,9 @@ class Valuation:
     """Every output of a contract's tape with its error.
 
     outputs and results belong together, price first; `stages` is the price at a quarter, half and all of the paths;
-    `seconds` the time of the main run; `ready` the contract as it was run, with refined steps; `refinement` how fine
-    these are, where the price lies between bounds.
+    `seconds` the time of the main run; `reduction` the methods of variance reduction, `notes` what they found;
+    `hedge`, where gains of a hedge are among them, what a hedger is left with; `ready` the contract as it was run, with
+    refined steps; `refinement` how fine these are, where the price lies between bounds.
     """
 
     outputs: tuple[Output, ...]
@@ -55,7 +44,10 @@ class Valuation:
     seed: int
     seconds: float
     interrupted: bool
-    ready: Ready | None = None
+    ready: Ready
+    reduction: tuple[str, ...] = ()
+    notes: tuple[str, ...] = ()
+    hedge: tuple[Residual, ...] = ()
     refinement: Refinement | None = None
 
     @property
@@ -68,30 +60,12 @@ class Valuation:
                 if output.kind == kind)
 
 
-def prepare(dated: DatedContract, market: Market) -> tuple[Ready | None, tuple[Fault, ...]]:
-    """The program of a contract on a market, and what the tape refuses.
-
-    Where several assets are watched together (`unrolled.bracketed`) its steps are not refined yet; `refined` does that.
-    """
-    market_map = MarketMap.of(market, dated)
-    if faults := market_map.faults():
-        return None, tuple(faults)
-    unrolled, program = _made(dated, market_map, 1)
-    if program is None:
-        return None, unrolled.faults
-    return Ready(dated, market_map, unrolled, program), ()
-
-
-def _made(dated: DatedContract, market: MarketMap, pieces: int) -> tuple[Unrolled, Program | None]:
-    unrolled = unroll(dated, nodes=market.nodes(), makeup=market.makeup(), pieces=pieces)
-    return unrolled, None if unrolled.faults else lower(unrolled.tape, market.values(unrolled.tape.leaves))
-
-
 def value(
     ready: Ready,
     asked: Precision,
     *,
     seed: int,
+    reduction: tuple[str, ...] = (),
     threads: int | None = None,
     pieces: int | None = None,
     progress: Progress | None = None,
@@ -101,38 +75,62 @@ def value(
 
     Where the price lies between bounds the steps are refined until these are closer than the 95 % half-width asked for,
     or that of the paths asked for; `pieces` prescribes the refinement (see `estimators.bracket`), as a replay must.
-    `notice` is told if kernels must be compiled first, and of a run that will take long. Raises RequestError where the
-    precision asked for cannot be reached, NonFinitePath (of `machine.run`) where a path gives no finite number, and
-    KeyboardInterrupt if that comes before there is an estimate.
+    `reduction` holds names of methods of variance reduction (`reduction.names.wished`); `notice` is told if kernels
+    must be compiled first, and of a run that will take long. Raises RequestError and Refusal for methods that do not
+    apply, RequestError where the precision asked for cannot be reached, NonFinitePath (of `machine.run`) where a path
+    gives no finite number, and KeyboardInterrupt if that comes before there is an estimate.
     """
-    outputs = ready.unrolled.tape.outputs
-    assert outputs[0].kind == "price", "the price is the first output"
-    price = replace(ready.program, outputs=ready.program.outputs[:1])
-    how = {"seed": seed, "threads": threads}
+    assert ready.unrolled.tape.outputs[0].kind == "price", "the price is the first output"
+    load_kernels(ready.program, notice)  # before any clock starts
+    refinement = None
+    if ready.unrolled.bracketed:
+        ready, refinement = _refined(ready, asked, seed, threads, pieces)
+    case = Case(ready, seed, threads)
+    scheme = best(case) if reduction == (AUTO,) else scheme_of(case, reduction)
+    found = sampled(ready, scheme, asked, seed=seed, threads=threads, progress=progress, notice=notice)
+    return replace(found, refinement=refinement, hedge=residuals(case) if HEDGE.name in scheme.names else ())
 
-    def prices(paths: int) -> np.ndarray:
-        return values_by_path(price, paths=paths, stream=Stream.PILOT, **how)[0]
+
+def sampled(ready: Ready, scheme: Scheme, asked: Precision, *, seed: int, threads: int | None = None,
+            progress: Progress | None = None, notice: Notice | None = None) -> Valuation:
+    """The value of a contract by a scheme; see `value`."""
+    sampler = Sampler(scheme, seed, threads)
 
     def seconds_for(paths: int) -> float:
         begun = time.perf_counter()
-        run(ready.program, paths=paths, stream=Stream.PILOT, **how)
+        sampler.sample(paths, stream=Stream.PILOT)
         return time.perf_counter() - begun
 
-    load_kernels(ready.program, notice)  # before any clock starts
-    planned = plan(asked, prices, seconds_for, exact=price.outputs[0] < 0, pace=pace([ready.program], threads))
-    refinement = None
-    if ready.unrolled.bracketed:
-        ready, planned, refinement = refined(ready, asked, planned, prices, seed=seed, threads=threads, pieces=pieces)
-        outputs = ready.unrolled.tape.outputs
-    announce(planned.paths, pace([ready.program], threads), notice)
+    speed = pace([scheme.program], threads) / scheme.each
+    planned = plan(asked, sampler.independent, seconds_for, exact=scheme.program.outputs[0] < 0, pace=speed)
+    paths = sampler.paths(planned.paths) if asked.seconds is None else sampler.within_time(planned.paths)
+    planned = replace(planned, paths=paths, pilot_paths=planned.pilot_paths + scheme.fit_paths)
+    announce(planned.paths, speed, notice)
+    counted = progress and (lambda done, _, error: progress(done, planned.paths, error))
     begun = time.perf_counter()
-    sums = run(ready.program, paths=planned.paths, snapshots=[planned.paths // share for share in SHARES],
-               progress=_counted(progress, planned), **how)
+    found = sampler.sample(planned.paths, progress=counted)
     seconds = time.perf_counter() - begun
-    if sums.paths < FEWEST_PATHS:
-        raise KeyboardInterrupt
-    results = estimates(sums.paths, sums.mean, sums.m2)
-    return Valuation(outputs, results, _stages(sums), planned, seed, seconds, sums.interrupted, ready, refinement)
+    return Valuation(ready.unrolled.tape.outputs, found.results, found.stages, planned, seed, seconds,
+                     found.interrupted, ready, scheme.names, scheme.notes)
+
+
+def _refined(ready: Ready, asked: Precision, seed: int, threads: int | None, pieces: int | None
+             ) -> tuple[Ready, Refinement]:
+    """The contract with steps so fine that the bounds of its price are closer than what sampling will leave open."""
+    program = replace(ready.program, outputs=ready.program.outputs[:1])
+    sampler = Sampler(scheme_of(Case(ready, seed, threads), ()), seed, threads)
+
+    def prices(paths: int) -> np.ndarray:
+        return values_by_path(program, paths=paths, seed=seed, stream=Stream.PILOT, threads=threads)[0]
+
+    def seconds_for(paths: int) -> float:
+        begun = time.perf_counter()
+        sampler.sample(paths, stream=Stream.PILOT)
+        return time.perf_counter() - begun
+
+    planned = plan(asked, sampler.independent, seconds_for, exact=program.outputs[0] < 0)
+    found, _, refinement = refined(ready, asked, planned, prices, seed=seed, threads=threads, pieces=pieces)
+    return found, refinement
 
 
 def refined(
@@ -142,18 +140,8 @@ def refined(
     """The contract with steps so fine that the bounds of its price are close enough, and how many paths there is time for
     then. `prices(paths)` gives the price on each path of the pilot."""
     target = planned.target or NORMAL_95 * float(prices(PILOT).std(ddof=1)) / math.sqrt(planned.paths)
-    unrolled, program, refinement = refine(lambda number: _made(ready.dated, ready.market, number), target,
+    unrolled, program, refinement = refine(lambda number: made(ready.dated, ready.market, number), target,
                                            seed=seed, threads=threads, pieces=pieces)
     if asked.seconds is not None:  # finer steps leave time for fewer paths
         planned = replace(planned, paths=whole_groups(max(planned.paths / refinement.cost, GROUP)))
     return replace(ready, unrolled=unrolled, program=program, pieces=refinement.pieces), planned, refinement
-
-
-def _counted(progress: Progress | None, planned: Plan) -> Callable[[int, float, float], None] | None:
-    return progress and (lambda done, _, error: progress(done, planned.paths, error))
-
-
-def _stages(sums: BlockSums) -> tuple[Estimate, ...]:
-    """The price of the first paths, at every share that the run reached, and of all."""
-    reached = {part.paths: part for part in (*sums.snapshots, sums) if FEWEST_PATHS <= part.paths <= sums.paths}
-    return tuple(estimates(paths, part.mean, part.m2)[0] for paths, part in sorted(reached.items()))

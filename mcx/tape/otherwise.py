@@ -100,4 +100,4 @@ def _price(
     alone = drop_dead_code(builder.tape([price]))
     faults = (walk.faults or unknown_laws(alone, makeup)
               or conflicts(weigh(alone, fixed_values(alone, dated.contract)).tape))
-    return price.value, [*faults, *walk.observations.missing(alone)]
+    return price.value, [*faults, *walk.observations.unstated.values(), *walk.observations.missing(alone)]

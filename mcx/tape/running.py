@@ -120,7 +120,14 @@ class Watched:
         return first
 
     def _past(self, day: Day) -> int:
-        return self.formulas.builder.constant(self._known_past(day))
+        """What is known of the past; where that is too little, the fault is noted and the walk goes on, so that all
+        that is missing is found at once."""
+        try:
+            known = self._known_past(day)
+        except Unreadable as trouble:
+            self.observations.unstated[self.watch.running.name] = trouble.fault
+            known = 0.0
+        return self.formulas.builder.constant(known)
 
     def _known_past(self, day: Day) -> float:
         """The value over the part of the watch that lies before the valuation date, up to a day."""
@@ -157,9 +164,9 @@ class Watched:
         ends = (at.name,) if isinstance(at, At) else (at.start.name, at.end.name)
         placed = [self.formulas.contract.terms[name].place for name in ends if name in self.formulas.contract.terms]
         raise Unreadable(placed[0] if placed else running.place, (
-            f"'{running.name}' is watched all the time from {self.watch.start}, which fixings cannot tell; the contract "
-            f"must say what had happened by {self._needed(day)} or {day}, as 'happened: {{{running.name}: {{{day}: "
-            f"{what}}}}}'"))
+            f"'{running.name}' is watched all the time from {self.watch.start}, which fixings cannot tell; the "
+            f"contract must say what had happened by {self._needed(day)} or {day}, as 'happened: "
+            f"{{{running.name}: {{{day}: {what}}}}}'"))
 
     def _needed(self, day: Day) -> datetime.date:
         """The earliest date of a statement that holds on a day: the day itself, or before the close of the valuation

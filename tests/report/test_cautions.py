@@ -26,7 +26,7 @@ def run(values: dict[str, Estimate] | None = None, plan: Plan | None = None, sta
     outputs = tuple(Output(name, 0, kind="price" if name == "price" else "condition", subject=name) for name in found)
     tape = Tape((Instruction(op, (), 0),), outputs, 1, 0)
     valuation = Valuation(outputs, tuple(found.values()), stages, plan or Plan(10_000, 0, "10,000 paths"), SEED, 1.0,
-                          interrupted)
+                          interrupted, ready=None)
     return list(warnings(valuation, tape, (Martingale("harbour", "1y", 1.0, 0.01, z),), met))
 
 
