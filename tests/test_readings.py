@@ -15,7 +15,7 @@ from helpers import Ready, prepare, request_of
 from mcx.checked.library import shipped_text
 from mcx.checked.load import Request, load
 from mcx.dates.dated_contract import DatedContract
-from mcx.dates.dating import date_contract
+from mcx.dates.dating import date_on
 from mcx.dates.otherwise import DatedOtherwise, date_otherwise
 from mcx.estimators.readings import ReadingsValuation, value_readings
 from mcx.leaves.market_map import MarketMap
@@ -40,7 +40,7 @@ def request(example: str) -> Request:
 
 
 def dated_of(made: Request, number: int = 0) -> DatedContract:
-    dated, faults = date_contract(made.contracts[number], made.market.valuation)
+    dated, faults = date_on(made.contracts[number], made.market)
     assert dated is not None, faults
     return dated
 

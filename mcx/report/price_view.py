@@ -79,8 +79,8 @@ def _facts(result: PriceResult, scale: Scale) -> Iterator[tuple[str, str]]:
     yield "value", (f"{fixed(result.value, min(money, 2))} {result.currency} for {size}, standard error "
                     f"{fixed(result.value_standard_error, min(money, 2))}")
     if result.accrued:
-        low, high = (scale.show(number, places) for number in (result.clean, result.accrued))
-        yield "clean value", f"{low}{scale.sign} and {high}{scale.sign} accrued; the value above is dirty"
+        clean, accrued = (scale.show(number, places) for number in (result.clean, result.accrued))
+        yield "clean value", f"{clean}{scale.sign} and {accrued}{scale.sign} accrued; the value above is dirty"
     if result.ended:
         yield "ended on", result.ended
     yield "standard error", f"{scale.show(result.standard_error, places)}{scale.sign}"
@@ -180,6 +180,9 @@ def show_prices(table: PriceTable, page: Page) -> None:
     page.table(("contract", "unit", "price", "± 95 %", "currency", "value"), map(_row, table.prices))
     page.line("± is the half-width of the 95 % interval, sampling error only; legs, probabilities and checks: one "
               "contract at a time, or --json")
+    for each in table.prices:
+        if each.bracket:
+            page.line(f"{each.contract}: {bounds(each, Scale(each))}")
     if table.not_valued:
         page.line(f"not valued: {', '.join(table.not_valued)}")
     first = table.prices[0]

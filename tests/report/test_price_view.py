@@ -70,6 +70,13 @@ def test_facts(note: PriceResult, monkeypatch: pytest.MonkeyPatch):
     assert f"seed {SEED}; variance reduction: none" in words and "expected life 1.818 years" in words
 
 
+def test_a_clean_value_beside_the_interval(note: PriceResult, monkeypatch: pytest.MonkeyPatch):
+    """Clean and accrued take nothing away from the interval of the dirty price."""
+    result = replace(note, price=0.98, accrued=0.01, clean=0.97, standard_error=0.01, interval95=(0.9604, 0.9996))
+    text = shown(monkeypatch, show_price, result)
+    assert "clean value     97.00 % and 1.00 % accrued" in text and "95 % interval   96.04 to 99.96 %" in text
+
+
 def test_legs_with_a_sum(note: PriceResult, monkeypatch: pytest.MonkeyPatch):
     """Each leg with its own error, then the price; one leg alone needs no sum."""
     lines = shown(monkeypatch, show_price, note).splitlines()

@@ -15,7 +15,7 @@ import pytest
 from test_calibration import KNOWN, RUNS
 
 from mcx.checked.load import load
-from mcx.dates.dating import date_contract
+from mcx.dates.dating import date_on
 from mcx.estimators.ready import Ready, prepare
 from mcx.estimators.reduction.catalogue import BY_NAME, METHODS, scheme_of
 from mcx.estimators.reduction.names import NAMES
@@ -35,7 +35,7 @@ def shipped() -> dict[str, Ready]:
     found = {}
     for file in EXAMPLES:
         request = load([file])
-        dated, _ = date_contract(request.contracts[0], request.market.valuation)
+        dated, _ = date_on(request.contracts[0], request.market)
         found[file.stem] = prepare(dated, request.market)[0]
     return found
 
