@@ -147,8 +147,7 @@ class _Run:
                 points += self._grid(base)
             except KeyboardInterrupt:
                 self.interrupted = True
-        self.notes += [*between(self.ready.dated, self.ready.unrolled.state), *self._near(values), *self._turning(),
-                       *self._unmoved()]
+        self.notes += [*between(self.ready.dated, self.ready.unrolled.state), *self._near(values), *self._turning()]
         return Found(price, tuple(values), tuple(self.refused), tuple(comparison), tuple(self.choices),
                      self.methods.jumps, tuple(rungs), tuple(points), tuple(self.notes), self.plan, self.sampling.seed,
                      time.perf_counter() - begun, self.interrupted)
