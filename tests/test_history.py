@@ -498,3 +498,37 @@ def test_without_a_market_for_its_past_a_contract_says_what_it_needs():
     contract = prepare(WORST_OF + market() + fixings(LEVELS)).dated.contract
     dated, _ = date_contract(contract, date(2027, 9, 15))
     assert [fault.place for fault in unroll(dated, nodes=()).faults] == [contract.place] * 2
+
+
+HIT = """contract: hit
+currency: EUR
+units: 1
+assets: [harbour]
+start: START
+settlement: 2 business days
+calendar: {holidays: none, roll: following}
+payoff: barrier
+terms:
+  side: call
+  direction: down
+  knock: out
+  strike: 100
+  barrier: 80
+  watched: {continuous: [START, 2027-12-01]}
+  expiry: 2027-12-01
+  rebate_at_hit: 5
+---
+market: 2027-06-01
+rates: {EUR: 2%}
+assets: {harbour: {spot: 100, currency: EUR, yield: 0%, vol: 20%}}
+"""
+
+
+def test_hits_of_a_watch_that_has_begun():
+    """Not hit so far, it is worth what one is that begins today, to the last digit; a hit of the past is refused."""
+    fresh = HIT.replace("START", "2027-06-01")
+    begun = HIT.replace("START", "2026-12-01").replace("---", "happened: {touched: {2027-06-01: false}}\n---")
+    one, other = (prepare(text).price(1 << 12, 7) for text in (fresh, begun))
+    assert (one.mean, one.error) == (other.mean, other.error)
+    with pytest.raises(AssertionError, match="'touched' came true before the valuation date"):
+        prepare(begun.replace("2027-06-01: false", "2027-05-31: true"))

@@ -21,7 +21,7 @@ from mcx.checked.reading import check_keys, listed, mapping_of, one_of, read, te
 from mcx.checked.formula_syntax import names_in
 from mcx.faults import Fault
 from mcx.text.located import Document, Mapping, Node, Scalar
-from mcx.text.scalars import expected, word
+from mcx.text.scalars import expected
 
 KEYS = ("about", "assets", "pays", "terms", "let", "running", "readings")
 HOWS = ("average", "total", "product", "lowest", "highest", "ever", "always", "latest")

@@ -71,7 +71,8 @@ def unroll_otherwise(
     wanted = [output for output in weighted.outputs if output.kind != "gap"]
     if unsure := _without_law(weighted, wanted, found):
         kept = [other for other in others if other.reading not in {fault.reading for fault in unsure}]
-        left = unroll_otherwise(dated, kept, nodes=nodes, makeup=makeup, pieces=pieces, everything_drawn=everything_drawn)
+        left = unroll_otherwise(dated, kept, nodes=nodes, makeup=makeup, pieces=pieces,
+                                everything_drawn=everything_drawn)
         return replace(left, refused=(*left.refused, *unsure))
     tape, grid = expand_levels(drop_dead_code(replace(weighted, outputs=tuple(wanted))), nodes, makeup, pieces)
     return UnrolledOtherwise(tape, grid, tuple(found), tuple(same), tuple(refused))

@@ -108,7 +108,7 @@ class Watched:
         return (self._past(min(Day(0.0, self.observations.history.valuation), self.watch.end, key=_time)),)
 
     def known(self, day: Day) -> Values:
-        """What is known of the watch so far, today's level apart; nothing where it has not begun or nothing reads it."""
+        """What is known of the watch so far, today's level apart; nothing where it has not begun or is not read."""
         if not self._asked or self.watch.start.time >= 0.0 or day.time < self.watch.start.time:
             return ()
         return (self._past(min(day, self.watch.end, key=_time)),)
@@ -185,7 +185,8 @@ class Watched:
             return constant(ends[0] if op is Op.LOW else ends[1])
 
         try:
-            (value,) = Extremes(self.formulas, extreme).read(self.watch.running.formula, HIGHEST[self.watch.running.how])
+            running = self.watch.running
+            (value,) = Extremes(self.formulas, extreme).read(running.formula, HIGHEST[running.how])
         except _NoFixings:
             return None
         return self.formulas.fixed(value)

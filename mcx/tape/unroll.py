@@ -36,10 +36,10 @@ UNKNOWN_SUM = ("an asset with cash dividends that is converted at the rate of th
 UNKNOWN_MOMENT = ("the moment of a hit is not known where cash dividends are still to come or a dividend on an ex date "
                   "may bring the hit about; name the dates on which the level is watched")
 
-AT_A_HIT = ("shares cannot be delivered at the moment of a hit that is watched continuously: their level on the delivery "
-            "date, which depends on that moment, is not known; deliver on a date")
-PAST_HIT = ("'{}' came true before the valuation date, and at which moment is not read, nor what was paid then; a contract "
-            "that has ended needs no price; otherwise watch it on dates, whose fixings tell the day")
+AT_A_HIT = ("shares cannot be delivered at the moment of a hit that is watched continuously: their level on the "
+            "delivery date, which depends on that moment, is not known; deliver on a date")
+PAST_HIT = ("'{}' came true before the valuation date, and at which moment is not read, nor what was paid then; a "
+            "contract that has ended needs no price; otherwise watch it on dates, whose fixings tell the day")
 
 
 @dataclass(frozen=True, slots=True)

@@ -21,9 +21,9 @@ SEED = 0xC19BF174CF692694
 
 
 @cache
-def examples(path: Path) -> list[Ready]:
+def examples(path: Path, everything_drawn: bool = False) -> list[Ready]:
     request = load([path])
-    return [ready_of(request, number) for number in range(len(request.contracts))]
+    return [ready_of(request, number, everything_drawn) for number in range(len(request.contracts))]
 
 
 def bounds(ready: Ready) -> tuple[float, float]:
@@ -53,14 +53,14 @@ def test_no_path_of_payoffs_made_up_leaves_the_bounds(text: str):
 @pytest.mark.parametrize(("example", "number"), [
     ("capital_protection", 0), ("capital_protection", 1), ("cliquet", 0), ("shark_fin", 0), ("digital", 0)])
 def test_a_minimum_that_paths_meet_is_exact(example: str, number: int):
-    ready = examples(next(path for path in EXAMPLES if path.stem == example))[number]
+    ready = examples(next(path for path in EXAMPLES if path.stem == example), everything_drawn=True)[number]
     assert bounds(ready)[0] == pytest.approx(ready.by_path(4096, SEED)["price"].min(), rel=1e-12, abs=1e-15)
 
 
 @pytest.mark.parametrize(("example", "number"), [
     ("autocall", 0), ("airbag", 0), ("barrier_reverse_convertible", 0), ("snowball_autocall", 0), ("bonus", 1)])
 def test_a_maximum_that_paths_meet_is_exact(example: str, number: int):
-    ready = examples(next(path for path in EXAMPLES if path.stem == example))[number]
+    ready = examples(next(path for path in EXAMPLES if path.stem == example), everything_drawn=True)[number]
     assert bounds(ready)[1] == pytest.approx(ready.by_path(4096, SEED)["price"].max(), rel=1e-12)
 
 

@@ -177,7 +177,7 @@ def test_memory_and_endings():
 
 def test_continuous_watching():
     """A knock-in watched continuously is a jump where it is drawn, and none as a probability; a lookback is none."""
-    watch, span = running("hit", "ever", "spot <= 0.8 * strike"), {"hit": (0.0, 1.0), "low": (0.0, 1.0)}
+    watch, span = running("hit", "ever", "spot <= strike"), {"hit": (0.0, 1.0), "low": (0.0, 1.0)}
     knocked = event("end", pay("spot if hit else higher"))
     assert price_jumps(knocked, watches=[watch], watched=span) == ()
     assert kinds(price_jumps(knocked, watches=[watch], watched=span, everything_drawn=True)) == ["condition"]
