@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING
 from mcx.checked.load import Request, checked_request
 from mcx.dates.dated_contract import DatedContract
 from mcx.dates.dating import date_on
-from mcx.faults import Fault, InputError, Place, Refusal, RequestError, did_you_mean
+from mcx.faults import Fault, InputError, Place, RequestError, did_you_mean
 from mcx.text.documents import read_documents
 from mcx.text.located import Document
 

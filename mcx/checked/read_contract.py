@@ -23,7 +23,6 @@ from mcx.checked.read_terms import read_terms
 from mcx.checked.reading import (
     check_keys,
     items_of,
-    listed,
     mapping_of,
     offered,
     one_of,

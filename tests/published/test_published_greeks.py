@@ -9,7 +9,7 @@ import closed_forms as forms
 import numpy as np
 import pytest
 
-from greek_tools import Key, bend, greeks, ready, slope
+from greek_tools import bend, greeks, ready, slope
 from helpers import Estimate, check, document
 from mcx.estimators.batches import Batches
 from mcx.estimators.estimate import Estimate as PriceEstimate

@@ -16,7 +16,6 @@ from scipy.special import ndtr
 
 from mcx.estimators.reduction.turning import Day, Product
 from mcx.leaves.market_map import MarketMap
-from mcx.tape.program import Leaf, LeafKind
 
 
 class Law:
