@@ -20,4 +20,5 @@ def change(case: Case, draft: Draft) -> Draft:
     return replace(draft, tape=market.builder.tape(outputs), controls=controls)
 
 
-CONTROLS = Method("controls", "options with known values beside the contract's own", Stage.LEVELS, change)
+CONTROLS = Method("controls", "options with known values beside the contract's own", Stage.LEVELS, change,
+                  reads_tape=True)

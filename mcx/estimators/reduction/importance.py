@@ -142,4 +142,4 @@ def _climbed(start: np.ndarray, height: Callable[[np.ndarray], np.ndarray]) -> n
     return point
 
 
-IMPORTANCE = Method("importance", "paths drawn where the contract pays, weighted", Stage.NORMALS, change)
+IMPORTANCE = Method("importance", "paths drawn where the contract pays, weighted", Stage.NORMALS, change, reads_tape=True)
