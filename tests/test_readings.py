@@ -10,7 +10,7 @@ import numpy as np
 import pytest
 from closed_forms import barrier_option, slice_of_payoff
 from drawn import reference_results
-from helpers import Ready, prepare, request_of
+from helpers import Ready, prepare, price_of, request_of
 
 from mcx.checked.library import shipped_text
 from mcx.checked.load import Request, load
@@ -301,3 +301,28 @@ def test_a_difference_meets_its_closed_form_and_its_intervals_cover():
     assert 0.92 * 400 <= covered <= 0.98 * 400  # 2.8 deviations of a binomial
     sharp = value_readings(dated, made.market, paths=1 << 20, seed=SEED).readings[0].difference
     assert sharp.standard_error < 5e-3 * truth and abs(sharp.z(truth)) < 4
+
+
+def test_readings_beside_an_amount_paid_at_a_hit():
+    """The dates of other readings cut no moment in two; a watch at each close is that of a contract of its own."""
+    text = """contract: up and out
+currency: EUR
+units: 1
+assets: [avocet]
+start: 2026-12-01
+settlement: 2 business days
+calendar: {holidays: ECB, roll: following}
+payoff: barrier
+terms: {side: call, direction: up, knock: out, strike: 50, barrier: 65, watched: WATCHED, expiry: 2027-06-01,
+        rebate_at_hit: 1}
+---
+market: 2026-12-01
+rates: {EUR: 2.0%}
+assets:
+  avocet: {spot: 52, currency: EUR, yield: 1.5%, vol: 20%}
+"""
+    made = request_of(text.replace("WATCHED", "{continuous: [2026-12-01, expiry]}"))
+    found = value_readings(date_on(made.contracts[0], made.market)[0], made.market, paths=2**16, seed=SEED)
+    close = next(each for each in found.readings if each.name == "barrier at each close")
+    alone = price_of(text.replace("WATCHED", "{from: 2026-12-02, until: expiry, every: 1 business day}"), 2**16, SEED + 1)
+    assert abs(close.price.value - alone.mean) < 4 * np.hypot(close.price.standard_error, alone.error)

@@ -64,7 +64,7 @@ def clock(market: MarketMap, grid: Grid) -> np.ndarray:
     """The variance of each simulated asset's log over each step of the grid, shape (steps, assets)."""
     leaves = [Leaf(LeafKind.VARIANCE, asset, start=start, end=end)
               for start, end in zip(grid.times, grid.times[1:]) for asset in grid.assets]
-    return market.values(leaves).reshape(-1, len(grid.assets))
+    return market.values(leaves).reshape(len(grid.times) - 1, len(grid.assets))
 
 
 def net_draws(net: Net, order: Order, variances: np.ndarray) -> DrawPlan:

@@ -13,7 +13,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
-from itertools import combinations, groupby
+from itertools import combinations
 
 import numpy as np
 
@@ -70,8 +70,10 @@ class Curvature:
 def first_order(numbers: Sequence[Input], contract: Contract) -> Iterator[Sensitivity]:
     """Every first-order sensitivity, in the order of the inputs."""
     at = {number: column for column, number in enumerate(numbers)}
-    for (kind, subject), found in groupby(numbers, key=lambda number: (number.kind, number.subject)):
-        nodes = list(found)
+    groups: dict[tuple[str, str], list[Input]] = {}
+    for number in numbers:  # dividends in cash and in shares take turns by their dates
+        groups.setdefault((number.kind, number.subject), []).append(number)
+    for (kind, subject), nodes in groups.items():
         if kind == "spot":
             yield from _deltas(nodes[0], at[nodes[0]], contract)
             continue

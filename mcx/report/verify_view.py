@@ -140,6 +140,8 @@ def _readings(result: VerifyResult, scale: Scale, places: int, page: Page) -> No
          scale.show(each.difference_standard_error, places), scale.show(each.left, places),
          "yes" if each.closes_gap else "")
         for each in shown), last=1)
+    if any("spot" in step.step for step in result.footing):
+        page.line("  at the spots that the quote states, as is the gap that is left")
     page.items(f"{each.reading}: {each.about}" for each in shown if each.closes_gap)
     unlike = [each for each in result.readings if each not in shown]
     page.items(f"{each.reading}: {_short(each.note)}" for each in unlike)

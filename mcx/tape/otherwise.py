@@ -16,7 +16,7 @@ from mcx.tape.builder import Builder
 from mcx.tape.formulas import fixed_values
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
-from mcx.tape.program import Output, Tape
+from mcx.tape.program import LevelKey, Output, Tape
 from mcx.tape.steps import PLAIN, Grid, Makeup, expand_levels
 from mcx.tape.unroll import unknown_laws, walked
 from mcx.tape.watching import conflicts
@@ -74,6 +74,12 @@ def unroll_otherwise(
         left = unroll_otherwise(dated, kept, nodes=nodes, makeup=makeup, pieces=pieces,
                                 everything_drawn=everything_drawn)
         return replace(left, refused=(*left.refused, *unsure))
+    if any(step.op is Op.MOMENT for step in weighted.instructions):  # its stretch is one step of the union of the dates
+        times = {time for step in weighted.instructions if isinstance(step.payload, LevelKey)
+                 for time in (step.payload.start, step.payload.time) if time > 0}
+        if not times <= set(nodes):
+            return unroll_otherwise(dated, others, nodes=sorted({*nodes, *times}), makeup=makeup, pieces=pieces,
+                                    everything_drawn=everything_drawn)
     tape, grid = expand_levels(drop_dead_code(replace(weighted, outputs=tuple(wanted))), nodes, makeup, pieces)
     return UnrolledOtherwise(tape, grid, tuple(found), tuple(same), tuple(refused))
 

@@ -180,6 +180,15 @@ def test_a_jump_after_the_last_dividend_has_its_rho(tmp_path: Path, size: str):
     near(found["rho", "EUR"], 1e-4 * 100 * exp(-0.04 * time) * by_rate)
 
 
+def test_cash_dividends_with_a_share_between_them_add_up(tmp_path: Path):
+    """The line for all is the sum of those by date, whatever stands between the dates."""
+    _, result = greeks(tmp_path, HEAD + CALL + market(
+        "currency: EUR, dividends: [{ex: 0.2y, cash: 3}, {ex: 0.5y, share: 2%}, {ex: 0.7y, cash: 4}], vol: 20%"), 2**14)
+    found = [each for each in result.greeks if each.name == "dividend" and "cash" in each.unit]
+    assert len(found) == 3 and [each.tenor for each in found].count("all") == 1
+    assert found[-1].value == pytest.approx(found[0].value + found[1].value, rel=1e-12)
+
+
 def test_dividends_decrement_and_rates_of_exchange(tmp_path: Path):
     """By the escrowed cash, by a decrement, by the fixed rate's vol and correlation, by the rate of the day."""
     df = exp(-0.04)

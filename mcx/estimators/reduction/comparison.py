@@ -116,7 +116,7 @@ def closed_form(found: Sequence[Compared]) -> float | None:
 def z_scores(found: Sequence[Compared]) -> Iterator[float]:
     """The distance of each estimate from all others pooled by their variances, in standard errors."""
     values = np.array([each.price.value for each in found])
-    least = EXACT * np.maximum(np.abs(values), 1e-300)
+    least = EXACT * np.maximum(np.abs(values), 1e-120)
     weights = 1.0 / np.maximum([each.price.standard_error for each in found], least) ** 2
     for number, each in enumerate(found):
         others = np.arange(len(found)) != number
