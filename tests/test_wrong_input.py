@@ -204,8 +204,10 @@ def test_watches_that_are_refused_beside_other_slips(tmp_path: Path):
     """That the joint law of several assets' extremes is not known is said in the same round, too."""
     watched = NOTE.replace("low: {lowest: performance, at: averaging}",
                            "low: {lowest: performance, at: {continuous: [averaging.first, averaging.last]}}")
-    (refusal,) = told(tmp_path, watched)
-    assert refusal.startswith("13:3: several assets watched at once, and their extremes decide more than what is paid")
+    refusal = ("13:3: several assets watched at once, and their extremes decide more than what is paid (they are "
+               "compared with something that is not fixed, or a formula that is no sum of payments): their joint law is "
+               "not known; watch them on dates")
+    assert told(tmp_path, watched) == [refusal]
     old, new, fault = SLIPS["negative vol"]
     assert told(tmp_path, watched.replace(old, new)) == [refusal, fault]
 
