@@ -1,6 +1,6 @@
 """Independent values, with their errors, for structured notes and exotic options declared in YAML.
 
-`price`, `greeks`, `readback`, `payoffs`, `definition`, `blank` and `replay` are the verbs of the command line as
+`price`, `greeks`, `readback`, `payoffs`, `definition`, `blank`, `schema` and `replay` are the verbs of the command line as
 functions; see `mcx.api` for their arguments and `mcx.report.results` for what they return. Importing the package loads
 nothing heavy: each name is fetched when it is first used.
 """
@@ -11,7 +11,7 @@ from importlib import import_module
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
-    from mcx.api import blank, definition, greeks, payoffs, price, readback, replay
+    from mcx.api import blank, definition, greeks, payoffs, price, readback, replay, schema
     from mcx.faults import Fault, InputError, Place, Refusal, RequestError
     from mcx.report.greek_results import GreeksResult, GreeksTable
     from mcx.report.results import (
@@ -27,7 +27,7 @@ if TYPE_CHECKING:
     __version__: str
 
 HOMES = {
-    "mcx.api": ("blank", "definition", "greeks", "payoffs", "price", "readback", "replay"),
+    "mcx.api": ("blank", "definition", "greeks", "payoffs", "price", "readback", "replay", "schema"),
     "mcx.faults": ("Fault", "InputError", "Place", "Refusal", "RequestError"),
     "mcx.report.greek_results": ("GreeksResult", "GreeksTable"),
     "mcx.report.results": ("Definition", "Library", "PriceResult", "PriceTable", "Readback", "ReadbackTable", "Replay"),
@@ -56,6 +56,7 @@ __all__ = [
     "price",
     "readback",
     "replay",
+    "schema",
 ]
 
 

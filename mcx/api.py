@@ -186,6 +186,19 @@ def blank(name: str, assets: Sequence[str]) -> str:
     return fill_in(payoff, assets)
 
 
+def schema(name: str | None = None) -> dict:
+    """The JSON schema of documents, for editors: with contracts on one definition of the library, or on any.
+
+    Raises RequestError for an unknown name.
+    """
+    from mcx.checked.library import shipped_names
+    from mcx.report.schemas.documents import schema as schema_of
+
+    names = shipped_names() if name is None else (name,)
+    title = "contracts, markets and payoff definitions" if name is None else f"a contract on '{name}', and its market"
+    return schema_of([_shipped(each) for each in names], title, only=name is not None)
+
+
 def replay(
     file: File,
     *,

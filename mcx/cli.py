@@ -142,14 +142,19 @@ def readback(files: tuple[str, ...], path: str | None, as_json: bool) -> None:
 @click.argument("name", required=False)
 @click.option("--blank", is_flag=True, help="Contract and market to fill in.")
 @click.option("--assets", metavar="A,B", help="The assets to write into them.")
+@click.option("--schema", is_flag=True, help="JSON schema for editors: contracts on NAME, or on any definition.")
 @AS_JSON
-def payoffs(name: str | None, blank: bool, assets: str | None, as_json: bool) -> None:
+def payoffs(name: str | None, blank: bool, assets: str | None, schema: bool, as_json: bool) -> None:
     """Which definitions are there? NAME prints one in full."""
     from mcx import api
 
     if blank != (assets is not None) or (blank and name is None):
         raise click.UsageError("a blank needs all three: 'mcx payoffs NAME --blank --assets a,b'")
-    if blank:
+    if blank and schema:
+        raise click.UsageError("'--blank' and '--schema' are two answers; ask for one at a time")
+    if schema:
+        click.echo(json.dumps(api.schema(name), indent=2, ensure_ascii=False))
+    elif blank:
         text = api.blank(name, [asset.strip() for asset in assets.split(",")])
         click.echo(json.dumps({"blank": text}, indent=2, ensure_ascii=False) if as_json else text, nl=as_json)
     elif name:
