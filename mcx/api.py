@@ -25,7 +25,7 @@ if TYPE_CHECKING:
     from mcx.estimators.plan import Precision
     from mcx.estimators.price import Ready
     from mcx.report.greek_results import GreeksResult, GreeksTable
-    from mcx.report.results import Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay
+    from mcx.report.results import Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay, Result
 
 File = str | Path
 Progress = Callable[[int, int, float], None]  # paths done, paths planned, standard error so far (unit of the price)
@@ -44,6 +44,7 @@ def price(
     threads: int | None = None,
     reduction: str = "none",
     record: File | None = None,
+    report: File | None = None,
     progress: Progress | None = None,
     notice: Callable[[str], None] | None = None,
 ) -> PriceResult | PriceTable:
@@ -51,8 +52,8 @@ def price(
 
     At most one of `paths`, `within` (a 95 % half-width: '2bp' or '0.02%' of the notional, '0.01' money per unit) and
     `seconds` decides the number of paths; without any it is 2^20. `seed` None is 1. `threads` None takes all; it
-    changes no digit. `record` names a file to write a valuation record to. `notice` is called with a sentence when
-    kernels must be compiled. Raises InputError, RequestError, Refusal.
+    changes no digit. `record` names a file to write a valuation record to, `report` one for a page of HTML. `notice` is
+    called with a sentence when kernels must be compiled. Raises InputError, RequestError, Refusal.
     """
     from mcx.estimators.plan import DEFAULT_SEED, check_fits, precision
 
@@ -64,6 +65,10 @@ def price(
         from mcx.report.record import check_free
 
         check_free(record)
+    if report is not None:
+        from mcx.report.page.render import check_writable
+
+        check_writable(report)
     made, dated = _dated(files, with_market=True)
     for each in made.contracts:
         check_fits(asked, notional=each.notional is not None, title=each.title)
@@ -72,6 +77,8 @@ def price(
         from mcx.report.record import make_record, write_record
 
         write_record(record, make_record(_sources(made), [each.to_dict() for each in table.prices]))
+    if report is not None:
+        _write_report(report, "price", files, made, dated, table.prices)
     return table.prices[0] if len(made.contracts) == 1 else table
 
 
@@ -89,6 +96,7 @@ def greeks(
     threads: int | None = None,
     reduction: str = "none",
     record: File | None = None,
+    report: File | None = None,
     progress: Progress | None = None,
     notice: Callable[[str], None] | None = None,
 ) -> GreeksResult | GreeksTable:
@@ -114,6 +122,10 @@ def greeks(
         from mcx.report.record import check_free
 
         check_free(record)
+    if report is not None:
+        from mcx.report.page.render import check_writable
+
+        check_writable(report)
     made, dated = _dated(files, with_market=True)
     for each in made.contracts:
         check_fits(asked, notional=each.notional is not None, title=each.title)
@@ -126,6 +138,8 @@ def greeks(
         from mcx.report.record import make_record, write_record
 
         write_record(record, make_record(_sources(made), [each.to_dict() for each in table.contracts], "greeks"))
+    if report is not None:
+        _write_report(report, "greeks", files, made, dated, table.contracts)
     return table.contracts[0] if len(made.contracts) == 1 else table
 
 
@@ -341,6 +355,19 @@ def _greeks(
         if found.interrupted:
             break
     return GreeksTable(tuple(results), tuple(each.contract.title for each in dated[len(results):]))
+
+
+def _write_report(
+    file: File, verb: str, files: Sequence[File], made: Request, dated: Sequence[DatedContract], results: Sequence[Result]
+) -> None:
+    """A page about what was found, as far as it was, with the command that finds it again."""
+    from mcx.report.page.render import page, write_page
+    from mcx.report.repeat import command
+    from mcx.report.scene import scene
+
+    prepared = zip(_ready(made, dated[:len(results)]), results, strict=True)
+    scenes = [scene(ready, _sources(made), command(verb, files, result)) for ready, result in prepared]
+    write_page(file, page(f"mcx {verb}", results, scenes))
 
 
 def _ready(made: Request, dated: Sequence[DatedContract]) -> list[Ready]:

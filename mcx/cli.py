@@ -24,6 +24,7 @@ NO, WRONG, INTERRUPTED = 1, 2, 130
 
 MOVES = "-5%,-4%,-3%,-2%,-1%,0,1%,2%,3%,4%,5%"  # of a ladder or grid, where none are named
 
+REPORT = click.option("--report", type=click.Path(), help="Write a page of HTML, for reading and printing, to this file.")
 FILES = click.argument("files", nargs=-1, required=True, metavar="FILES…")
 AS_JSON = click.option("--json", "as_json", is_flag=True, help="One JSON object, full precision.")
 THREADS = click.option("--threads", type=int, help="Processors to use; changes no digit.  [all]")
@@ -90,6 +91,7 @@ def cli() -> None:
 @sampling
 @AS_JSON
 @click.option("--record", type=click.Path(), help="Write a valuation record to this new file.")
+@REPORT
 def price(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
     """What is it worth? Value, error, legs, probabilities and checks."""
     from mcx import api
@@ -112,6 +114,7 @@ def price(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
 @sampling
 @AS_JSON
 @click.option("--record", type=click.Path(), help="Write a valuation record to this new file.")
+@REPORT
 def greeks(files: tuple[str, ...], as_json: bool, ladder: bool, grid: bool, spot_moves: str | None,
            vol_moves: str | None, **wishes: object) -> None:
     """How does it move? Delta, gamma, vega, rho, theta and more, each with its error and its estimator."""
