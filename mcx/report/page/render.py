@@ -25,10 +25,12 @@ def page(title: str, results: Sequence[Result], scenes: Sequence[Scene]) -> str:
     return _render(title, sheets, whole=True)
 
 
-def piece(result: Result) -> str:
-    """What a notebook shows of a result: its sheet, or those of a table's contracts."""
+def piece(result: Result) -> str | None:
+    """What a notebook shows of a result: its sheet, or those of a table's contracts; None where it has none."""
     results = {PriceTable: "prices", GreeksTable: "contracts"}.get(type(result))
     found = getattr(result, results) if results else (result,)
+    if any(type(each) not in SHEETS for each in found):
+        return None
     return _render("", [SHEETS[type(each)](each, None) for each in found], whole=False)
 
 
