@@ -1,8 +1,8 @@
 """Independent values, with their errors, for structured notes and exotic options declared in YAML.
 
-`price`, `greeks`, `readback`, `payoffs`, `definition`, `blank`, `schema` and `replay` are the verbs of the command line as
-functions; see `mcx.api` for their arguments and `mcx.report.results` for what they return. Importing the package loads
-nothing heavy: each name is fetched when it is first used.
+`price`, `greeks`, `readback`, `payoffs`, `definition`, `blank`, `schema` and `replay` are the verbs of the command line
+as functions; see `mcx.api` for their arguments and `mcx.report.results` for what they return. Importing the package
+loads nothing heavy: each name is fetched when it is first used.
 """
 
 from __future__ import annotations

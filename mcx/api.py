@@ -358,7 +358,12 @@ def _greeks(
 
 
 def _write_report(
-    file: File, verb: str, files: Sequence[File], made: Request, dated: Sequence[DatedContract], results: Sequence[Result]
+    file: File,
+    verb: str,
+    files: Sequence[File],
+    made: Request,
+    dated: Sequence[DatedContract],
+    results: Sequence[Result],
 ) -> None:
     """A page about what was found, as far as it was, with the command that finds it again."""
     from mcx.report.page.render import page, write_page

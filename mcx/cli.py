@@ -24,7 +24,7 @@ NO, WRONG, INTERRUPTED = 1, 2, 130
 
 MOVES = "-5%,-4%,-3%,-2%,-1%,0,1%,2%,3%,4%,5%"  # of a ladder or grid, where none are named
 
-REPORT = click.option("--report", type=click.Path(), help="Write a page of HTML, for reading and printing, to this file.")
+REPORT = click.option("--report", type=click.Path(), help="Write a page of HTML to this file.")
 FILES = click.argument("files", nargs=-1, required=True, metavar="FILES…")
 AS_JSON = click.option("--json", "as_json", is_flag=True, help="One JSON object, full precision.")
 THREADS = click.option("--threads", type=int, help="Processors to use; changes no digit.  [all]")

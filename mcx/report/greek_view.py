@@ -26,7 +26,7 @@ def show_greeks(result: GreeksResult, page: Page) -> None:
         ("seed", f"{result.seed}; variance reduction: {result.reduction}; estimator asked for: {result.estimator}"),
     ))
     page.heading("sensitivities (sampling error only)")
-    page.table(("", "value", "error", "unit", "by"), (greek_row(greek, greek.estimator) for greek in result.greeks), last=2)
+    page.table(("", "value", "error", "unit", "by"), (greek_row(each, each.estimator) for each in result.greeks), last=2)
     if result.refused:
         page.heading("not given")
         said: dict[str, list[str]] = {}
@@ -35,7 +35,7 @@ def show_greeks(result: GreeksResult, page: Page) -> None:
         page.items(f"{', '.join(names)}: {reason}" for reason, names in said.items())
     if result.comparison:
         page.heading("for comparison: revaluation on the same random numbers, biased by the size of the move")
-        page.table(("", "value", "error", "unit", ""), (greek_row(greek, greek.note) for greek in result.comparison), last=2)
+        page.table(("", "value", "error", "unit", ""), (greek_row(each, each.note) for each in result.comparison), last=2)
     if result.jumps:
         page.heading("the payoff jumps here: no pathwise estimate of the payments behind it")
         page.items(f"{jump.kind} at {jump.place or 'an unnamed place'}" for jump in result.jumps)

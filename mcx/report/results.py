@@ -35,7 +35,8 @@ class Result:
     def rows(self) -> list[dict]:
         """One row for each entry of the main list, of what is no list itself."""
         found = getattr(self, self.MAIN) if self.MAIN else (self,)
-        return [{key: value for key, value in plain(row).items() if not isinstance(value, dict | list)} for row in found]
+        rows = map(plain, found)
+        return [{key: value for key, value in row.items() if not isinstance(value, dict | list)} for row in rows]
 
     def to_frame(self) -> DataFrame:
         """The rows as a pandas DataFrame; raises ImportError where pandas is not installed."""

@@ -1,5 +1,5 @@
-"""What surrounds a number on a page: how far the levels may go, where the contract looks at them, what it would pay, and
-the inputs as they were stated.
+"""What surrounds a number on a page: how far the levels may go, where the contract looks at them, what it would pay,
+and the inputs as they were stated.
 
 The quantiles are the model's own, in closed form; the payments are the contract's tape along straight paths.
 """
@@ -37,8 +37,8 @@ class Scene:
     """The surroundings of one contract's number.
 
     `base` names the term that levels are measured by ('' where they are not); then fans are in percent of it. `profile`
-    holds (final performance, undiscounted payments), both in percent where there is a base and a notional. `sources` are
-    files with their SHA-256.
+    holds (final performance, undiscounted payments), both in percent where there is a base and a notional. `sources`
+    are files with their SHA-256.
     """
 
     terms: tuple[tuple[str, str], ...]
@@ -98,7 +98,8 @@ def _looked_at(settled: Settled, types: Sequence[str]) -> list[str]:
             if isinstance(part, Binary) and part.symbol in COMPARED:
                 for side, other in ((part.left, part.right), (part.right, part.left)):
                     named = isinstance(side, Name) and side.name in terms and terms[side.name].type in types
-                    if named and not isinstance(other, Number) and not (isinstance(other, Name) and other.name in terms):
+                    fixed = isinstance(other, Number) or (isinstance(other, Name) and other.name in terms)
+                    if named and not fixed:
                         found[side.name] = None
     return list(found)
 

@@ -1,4 +1,4 @@
-"""The page of a result: nothing from outside, text stays text, every picture has its words, and what is drawn is right."""
+"""The page of a result: nothing from outside, text stays text, every picture has its words, what is drawn is right."""
 
 from __future__ import annotations
 

@@ -92,8 +92,8 @@ WRONG = {"a mapping": ODD, "a list": Sequence((ODD,), PLACE), "odd text": Scalar
 BROKEN = {"contract": ("autocall", "asian", "dividends_and_currencies"),
           "market": ("harbour_lantern", "dividends_and_currencies"), "payoff": ("autocall", "asian")}
 
-MEANING = re.compile("there is no|no '.*' here|is not expected here|can be 'per'|behind 'from'|goes by asset|no funding|"
-                     "the market has no|no correlation|rate of exchange|needs 'quanto|is not a choice|is no word of|"
+MEANING = re.compile("there is no|no '.*' here|is not expected here|can be 'per'|behind 'from'|goes by asset|"
+                     "no funding|the market has no|no correlation|rate of exchange|needs 'quanto|is not a choice|is no word of|"
                      "'given' asks about|is no asset of")
 
 

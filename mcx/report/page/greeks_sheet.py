@@ -27,10 +27,12 @@ def greeks_sheet(result: GreeksResult, scene: Scene | None) -> Sheet:
             ("seed", f"{result.seed}; variance reduction: {result.reduction}; estimator: {result.estimator}"))
     rows, left = cut([greek_row(each, each.estimator) for each in result.greeks], MOST_ROWS)
     blocks = [Facts("valuation", head), *_pictures(result),
-              Table("sensitivities (sampling error only)", ("", "value", "error", "unit", "by"), rows, tail=3, note=left)]
+              Table("sensitivities (sampling error only)", ("", "value", "error", "unit", "by"), rows, tail=3,
+                    note=left)]
     blocks += _ladder(result, factor, unit, places)
     blocks += surroundings(scene, unit) if scene else ()
-    refused = [f"{' '.join(filter(None, (each.name, each.asset, each.tenor)))}: {each.reason}" for each in result.refused]
+    refused = [f"{' '.join(filter(None, (each.name, each.asset, each.tenor)))}: {each.reason}"
+               for each in result.refused]
     blocks += notes(("not given", refused), ("choice of estimators", result.choices), ("warnings", result.warnings),
                     ("assumptions", result.assumptions or ("none",)))
     blocks += evidence(scene) if scene else ()

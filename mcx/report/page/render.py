@@ -14,8 +14,8 @@ from mcx.report.page.price_sheet import price_sheet
 from mcx.report.results import PriceResult, PriceTable, Result
 from mcx.report.scene import Scene
 
-FOOTER = ("An estimate on the inputs shown and the user's reading of the terms, to be reviewed by a licensed professional "
-          "under local rules; not advice and not an offer.")
+FOOTER = ("An estimate on the inputs shown and the user's reading of the terms, to be reviewed by a licensed "
+          "professional under local rules; not advice and not an offer.")
 SHEETS = {PriceResult: price_sheet, GreeksResult: greeks_sheet}
 
 
@@ -48,7 +48,8 @@ def write_page(file: str | Path, text: str) -> None:
     try:
         Path(file).write_text(text, encoding="utf-8")
     except (OSError, ValueError) as error:
-        raise RequestError(f"{file}: the report cannot be written: {getattr(error, 'strerror', None) or error}") from None
+        reason = getattr(error, "strerror", None) or error
+        raise RequestError(f"{file}: the report cannot be written: {reason}") from None
 
 
 def _render(title: str, sheets: Sequence[Sheet], whole: bool) -> str:

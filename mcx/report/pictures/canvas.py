@@ -1,4 +1,4 @@
-"""An SVG to draw on: scales from numbers to places, axes, lines, bars with their errors, and labels that do not meet."""
+"""An SVG to draw on: scales from numbers to places, axes, lines, bars with their errors, labels that do not meet."""
 
 from __future__ import annotations
 
@@ -49,12 +49,13 @@ def scale(numbers: Iterable[float], start: float, end: float, zero: bool = False
     numbers = [*numbers, *([0.0] if zero else [])]
     low, high = min(numbers), max(numbers)
     room = 0.06 * (high - low) or 0.05 * abs(high) or 1.0
-    return Scale(low - (room if low != 0.0 or not zero else 0.0), high + (room if high or not zero else 0.0), start, end)
+    below, above = (0.0 if zero and edge == 0.0 and low < high else room for edge in (low, high))
+    return Scale(low - below, high + above, start, end)
 
 
 def written(number: float) -> str:
     """A number on an axis."""
-    return f"{number:,.6g}".replace("-0", "0") if number == 0 else f"{number:,.6g}"
+    return f"{number or 0.0:,.6g}"  # never '-0'
 
 
 class Canvas:
