@@ -1,8 +1,8 @@
 """Independent values, with their errors, for structured notes and exotic options declared in YAML.
 
-`price`, `greeks`, `readback`, `payoffs`, `definition`, `blank`, `schema` and `replay` are the verbs of the command line
-as functions; see `mcx.api` for their arguments and `mcx.report.results` for what they return. Importing the package
-loads nothing heavy: each name is fetched when it is first used.
+`price`, `greeks`, `verify`, `readback`, `payoffs`, `definition`, `blank`, `schema` and `replay` are the verbs of the
+command line as functions; see `mcx.api` for their arguments and `mcx.report.results` for what they return. Importing
+the package loads nothing heavy: each name is fetched when it is first used.
 """
 
 from __future__ import annotations
@@ -11,7 +11,7 @@ from importlib import import_module
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
-    from mcx.api import blank, definition, greeks, payoffs, price, readback, replay, schema
+    from mcx.api import blank, definition, greeks, payoffs, price, readback, replay, schema, verify
     from mcx.faults import Fault, InputError, Place, Refusal, RequestError
     from mcx.report.greek_results import GreeksResult, GreeksTable
     from mcx.report.results import (
@@ -23,14 +23,16 @@ if TYPE_CHECKING:
         ReadbackTable,
         Replay,
     )
+    from mcx.report.verify_results import VerifyResult, VerifyTable
 
     __version__: str
 
 HOMES = {
-    "mcx.api": ("blank", "definition", "greeks", "payoffs", "price", "readback", "replay", "schema"),
+    "mcx.api": ("blank", "definition", "greeks", "payoffs", "price", "readback", "replay", "schema", "verify"),
     "mcx.faults": ("Fault", "InputError", "Place", "Refusal", "RequestError"),
     "mcx.report.greek_results": ("GreeksResult", "GreeksTable"),
     "mcx.report.results": ("Definition", "Library", "PriceResult", "PriceTable", "Readback", "ReadbackTable", "Replay"),
+    "mcx.report.verify_results": ("VerifyResult", "VerifyTable"),
 }
 
 __all__ = [
@@ -48,6 +50,8 @@ __all__ = [
     "Refusal",
     "Replay",
     "RequestError",
+    "VerifyResult",
+    "VerifyTable",
     "__version__",
     "blank",
     "definition",
@@ -57,6 +61,7 @@ __all__ = [
     "readback",
     "replay",
     "schema",
+    "verify",
 ]
 
 

@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING
 
 from mcx.checked.load import Request, checked_request
 from mcx.dates.dated_contract import DatedContract
-from mcx.dates.dating import date_contract
+from mcx.dates.dating import date_on
 from mcx.faults import Fault, InputError, Place, Refusal, RequestError, did_you_mean
 from mcx.text.documents import read_documents
 from mcx.text.located import Document
@@ -25,13 +25,25 @@ if TYPE_CHECKING:
     from mcx.estimators.plan import Precision
     from mcx.estimators.price import Ready
     from mcx.report.greek_results import GreeksResult, GreeksTable
-    from mcx.report.results import Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay, Result
+    from mcx.report.results import (
+        CalendarView,
+        Definition,
+        Library,
+        PriceResult,
+        PriceTable,
+        Readback,
+        ReadbackTable,
+        Replay,
+        Result,
+    )
+    from mcx.report.verify_results import VerifyResult, VerifyTable
 
 File = str | Path
 Progress = Callable[[int, int, float], None]  # paths done, paths planned, standard error so far (unit of the price)
 REDUCTIONS = ("none",)
 LARGEST_SEED = (1 << 64) - 1
 CONTRACT_BEGINS = "a document that begins 'contract: TITLE'"
+QUOTE_BEGINS = "a document that begins 'quote: DEALER'"
 MARKET_BEGINS = "a document that begins 'market: DATE'"
 
 
@@ -53,7 +65,8 @@ def price(
     At most one of `paths`, `within` (a 95 % half-width: '2bp' or '0.02%' of the notional, '0.01' money per unit) and
     `seconds` decides the number of paths; without any it is 2^20. `seed` None is 1. `threads` None takes all; it
     changes no digit. `record` names a file to write a valuation record to, `report` one for a page of HTML. `notice` is
-    called with a sentence when kernels must be compiled. Raises InputError, RequestError, Refusal.
+    called with a sentence when kernels must be compiled, or a run will take long. Raises InputError, RequestError,
+    Refusal.
     """
     from mcx.estimators.plan import DEFAULT_SEED, check_fits, precision
 
@@ -143,21 +156,81 @@ def greeks(
     return table.contracts[0] if len(made.contracts) == 1 else table
 
 
-def readback(*files: File, path: File | None = None) -> Readback | ReadbackTable:
-    """What every contract in the files says, in sentences and dates; with a market also what that says on the dates.
+def verify(
+    *files: File,
+    solve: str = "",
+    target: str | float | None = None,
+    paths: int | None = None,
+    within: str | float | None = None,
+    seconds: float | None = None,
+    seed: int | None = None,
+    threads: int | None = None,
+    reduction: str = "none",
+    record: File | None = None,
+    progress: Progress | None = None,
+    notice: Callable[[str], None] | None = None,
+) -> VerifyResult | VerifyTable:
+    """Whether the quotes in the files can be right: one result, or a table of several with their ranking.
+
+    `solve` names a numeric term of the contract, whose values at the quote are found, or at `target` ('99.5%', or money
+    per unit). The other arguments are those of `price`; `within` is about the price. Raises InputError, RequestError,
+    Refusal.
+    """
+    from mcx.estimators.batches import check_paths
+    from mcx.estimators.plan import DEFAULT_SEED, check_fits, precision
+    from mcx.estimators.wishes import target_of
+
+    asked = precision(paths, within, seconds)
+    check_paths(asked.paths)
+    wish = solve, target_of(target)
+    if target is not None and not solve:
+        raise RequestError("'target' is a price to solve a term for; name the term with 'solve'")
+    seed = DEFAULT_SEED if seed is None else _seed(seed)
+    threads = _threads(threads)
+    _reduction(reduction)
+    if record is not None:
+        from mcx.report.record import check_free
+
+        check_free(record)
+    made, dated = _dated(files, with_market=True, with_quote=True)
+    for each in made.contracts:
+        check_fits(asked, notional=each.notional is not None, title=each.title)
+    count = len(made.quotes)
+    results = _verify(made, dated, [wish] * count, [asked] * count, [seed] * count, threads, progress, notice)
+    if record is not None:
+        from mcx.report.record import make_record, write_record
+
+        write_record(record, make_record(_sources(made), [each.to_dict() for each in results], "verify"))
+    if count == 1:
+        return results[0]
+    from mcx.report.verify_summary import verify_table
+
+    return verify_table(results)
+
+
+def readback(*files: File, path: File | None = None, calendar: bool = False) -> Readback | ReadbackTable | CalendarView:
+    """What every contract in the files says, in sentences and dates; with a market also what that says on the dates,
+    and what has become of the contract by its valuation date.
 
     `path` names a file of levels (YAML by asset and date, or CSV) that is run through the one contract in the files.
+    `calendar` gives in place of all that one list of the fixings, decisions and payments to come of all contracts.
     Raises InputError, RequestError.
     """
     from mcx.report.readback import readback as read_back
     from mcx.report.results import ReadbackTable
 
     made, dated = _dated(files, with_market=False)
+    if path is not None and calendar:
+        raise RequestError("levels are run through one contract; a calendar lists what comes next of all")
     if path is not None and len(dated) > 1:
         raise RequestError(f"levels can be run through one contract at a time; the files hold {len(dated)}")
     if made.market is not None:
         _check_dividends(made.market, dated)
     given = None if path is None else _on_levels(dated[0], path)
+    if path is None and made.market is not None:
+        _check_fixings(dated)
+    if calendar:
+        return _calendar(made, dated)
     found = tuple(read_back(each, made.market, given) for each in dated)
     return found[0] if len(found) == 1 else ReadbackTable(found)
 
@@ -229,26 +302,35 @@ def replay(
     made, faults = checked_request(*documents_of(stored))
     dated = _all_dated(made, faults)
     runs = stored["request"]
-    if made.market is None or len(runs) != len(dated):
-        raise RequestError(f"{file}: the record has {len(runs)} requests for the {len(dated)} contracts in its inputs")
+    verb = stored.get("verb", "price")
+    there = len(made.quotes) if verb == "verify" else len(dated)
+    if made.market is None or len(runs) != there:
+        what = "quotes" if verb == "verify" else "contracts"
+        raise RequestError(f"{file}: the record has {len(runs)} requests for the {there} {what} in its inputs")
     asked = [precision(each["paths"], None, None) for each in runs]
     seeds = [_seed(each["seed"]) for each in runs]
-    if stored.get("verb", "price") == "greeks":
+    if verb == "verify":
+        wishes = [(each["solve"], each["target"]) for each in runs]
+        results = _verify(made, dated, wishes, asked, seeds, threads, progress, notice)
+    elif verb == "greeks":
         from mcx.estimators.wishes import wish_of
 
         keys = ("estimator", "bump", "assets", "spot_moves", "vol_moves")
         wishes = [wish_of(*(each[key] for key in keys)) for each in runs]
-        table = _greeks(made, dated, wishes, asked, seeds, threads, progress, notice)
-        results = table.contracts
+        results = _whole(_greeks(made, dated, wishes, asked, seeds, threads, progress, notice)).contracts
     else:
-        table = _price(made, dated, asked, seeds, threads, progress, notice)
-        results = table.prices
-    if table.interrupted:
-        raise KeyboardInterrupt
+        results = _whole(_price(made, dated, asked, seeds, threads, progress, notice)).prices
     return compare(stored, [each.to_dict() for each in results], environment())
 
 
-def _dated(files: Sequence[File], *, with_market: bool) -> tuple[Request, list[DatedContract]]:
+def _whole(table):
+    """A table of results, if nothing interrupted it; raises KeyboardInterrupt."""
+    if table.interrupted:
+        raise KeyboardInterrupt
+    return table
+
+
+def _dated(files: Sequence[File], *, with_market: bool, with_quote: bool = False) -> tuple[Request, list[DatedContract]]:
     """The documents of the files and their contracts with every date, all sound."""
     if not files:
         raise RequestError("no files are given")
@@ -256,7 +338,7 @@ def _dated(files: Sequence[File], *, with_market: bool) -> tuple[Request, list[D
     made, faults = checked_request(documents, unread)
     kinds = {document.kind for document in made.documents}
     names = ", ".join(map(str, files))
-    missing = [("contract", CONTRACT_BEGINS), ("market", MARKET_BEGINS)][: 1 + with_market]
+    missing = [("contract", CONTRACT_BEGINS), ("market", MARKET_BEGINS), ("quote", QUOTE_BEGINS)][: 1 + with_market + with_quote]
     for kind, begins in missing:
         if kind not in kinds and not unread:  # else it may stand in what could not be read
             faults.append(Fault(Place(str(files[0]), 1, 1), f"no {kind} in {names}; expected {begins}"))
@@ -267,23 +349,43 @@ def _all_dated(made: Request, faults: Iterable[Fault]) -> list[DatedContract]:
     """Every contract of a request with its dates; raises InputError with all faults."""
     faults, dated = list(faults), []
     for contract in made.contracts:
-        found, wrong = date_contract(contract, made.market.valuation if made.market else None)
+        found, wrong = date_on(contract, made.market)
         faults += wrong
         if found is not None:
             dated.append(found)
     if faults:
-        raise InputError([*faults, *_watches_refused(dated)])
+        raise InputError([*faults, *_refused(dated)])
     return dated
 
 
-def _watches_refused(dated: Iterable[DatedContract]) -> list[Fault]:
-    """The continuous watches that cannot be simulated, so that they are told beside the faults of the documents."""
-    watched = [each for each in dated if each.watches]
+def _refused(dated: Iterable[DatedContract]) -> list[Fault]:
+    """Continuous watches that cannot be simulated and fixings that are missing, so that they are told beside the faults
+    of the documents."""
+    watched = [each for each in dated if each.watches or each.begun]
     if not watched:
         return []
     from mcx.tape.unroll import unroll
 
-    return [fault for each in watched for fault in unroll(each, nodes=()).faults]
+    return [fault for each in watched for fault in unroll(each, nodes=()).faults
+            if each.history.sound or fault.place != each.history.place]  # what was misspelt is not missing as well
+
+
+def _check_fixings(dated: Iterable[DatedContract]) -> None:
+    """Raises InputError with every fixing that is missing. What else the tape refuses, the readback says."""
+    from mcx.tape.unroll import unroll
+
+    faults = [fault for each in dated if each.begun for fault in unroll(each, nodes=()).faults]
+    if faults:
+        raise InputError(faults)
+
+
+def _calendar(made: Request, dated: Sequence[DatedContract]) -> CalendarView:
+    """What comes next of every contract; what is known of the past needs a market."""
+    from mcx.report.calendar import calendar
+    from mcx.tape.unroll import unroll
+
+    states = [unroll(each, nodes=()).state if made.market else None for each in dated]
+    return calendar(zip(dated, states, strict=True))
 
 
 def _check_dividends(market: Market, dated: Iterable[DatedContract]) -> None:
@@ -375,6 +477,35 @@ def _write_report(
     write_page(file, page(f"mcx {verb}", results, scenes))
 
 
+def _verify(
+    made: Request,
+    dated: Sequence[DatedContract],
+    wishes: Sequence[tuple[str, float | None]],
+    asked: Sequence[Precision],
+    seeds: Sequence[int],
+    threads: int | None,
+    progress: Progress | None,
+    notice: Callable[[str], None] | None,
+) -> list[VerifyResult]:
+    """Every quote against its contract; the quotes of one contract share its paths."""
+    from mcx.estimators.finite import finite
+    from mcx.estimators.verify import Bench
+    from mcx.report.verify_summary import verify_result
+
+    ready = {each.dated.contract.title: each for each in _ready(made, dated)}
+    benches: dict[tuple, Bench] = {}
+    results = []
+    for quote, wish, precision, seed in zip(made.quotes, wishes, asked, seeds, strict=True):
+        key = quote.about, precision, seed
+        with finite(ready[quote.about]):
+            if key not in benches:
+                benches[key] = Bench(ready[quote.about], made.market, precision, seed=seed, threads=threads,
+                                     progress=progress, notice=notice)
+            found = benches[key].verify(quote, *wish)
+        results.append(verify_result(ready[quote.about], made.market, found, *wish))
+    return results
+
+
 def _ready(made: Request, dated: Sequence[DatedContract]) -> list[Ready]:
     """Every contract as a program on the market; raises InputError with all that the tape refuses."""
     from mcx.estimators.price import prepare
@@ -398,7 +529,7 @@ def _on_levels(dated: DatedContract, path: File):
     except (OSError, ValueError) as error:
         raise RequestError(f"{file}: the levels cannot be read: {getattr(error, 'strerror', None) or error}") from None
     levels, faults = read_levels(data, file, dated)
-    unrolled = unroll(dated, nodes=())
+    unrolled = unroll(dated, nodes=(), given=True)
     faults += unrolled.faults
     if not faults:
         found, faults = run_levels(dated, unrolled.observed, levels, file)

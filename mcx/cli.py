@@ -9,6 +9,7 @@ import atexit
 import gc
 import json
 import os
+import re
 import sys
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
@@ -24,10 +25,25 @@ NO, WRONG, INTERRUPTED = 1, 2, 130
 
 MOVES = "-5%,-4%,-3%,-2%,-1%,0,1%,2%,3%,4%,5%"  # of a ladder or grid, where none are named
 
+EXPONENT = re.compile(r"[+-]?[0-9]+(\.[0-9]*)?[eE][+-]?[0-9]{1,2}")
 REPORT = click.option("--report", type=click.Path(), help="Write a page of HTML to this file.")
 FILES = click.argument("files", nargs=-1, required=True, metavar="FILES…")
 AS_JSON = click.option("--json", "as_json", is_flag=True, help="One JSON object, full precision.")
 THREADS = click.option("--threads", type=int, help="Processors to use; changes no digit.  [all]")
+
+
+class Whole(click.ParamType):
+    """A whole number, in exponent form too: 1000000 or 1e6."""
+
+    name = "integer"
+
+    def convert(self, value: object, parameter: click.Parameter | None, context: click.Context | None) -> int:
+        if EXPONENT.fullmatch(str(value)):
+            from decimal import Decimal
+
+            number = Decimal(value)
+            value = int(number) if number == number.to_integral_value() else value
+        return click.INT.convert(value, parameter, context)
 
 
 def sampling(command: Callable) -> Callable:
@@ -38,7 +54,7 @@ def sampling(command: Callable) -> Callable:
         click.option("--seed", type=int, help="Seed of the random numbers.  [1]"),
         click.option("--seconds", type=float, help="As many paths as this time allows, by a pilot run."),
         click.option("--within", help="95 % half-width to reach, as 2bp; money per unit, as 0.01, for 'units'."),
-        click.option("--paths", type=int, help="Number of paths.  [1048576]"),
+        click.option("--paths", type=Whole(), help="Number of paths, as 1000000 or 1e6.  [1048576]"),
     ):
         command = option(command)
     return command
@@ -122,8 +138,8 @@ def greeks(files: tuple[str, ...], as_json: bool, ladder: bool, grid: bool, spot
 
     if vol_moves is not None and not grid or spot_moves is not None and not (ladder or grid):
         raise click.UsageError("'--spot-moves' goes with '--ladder' or '--grid', '--vol-moves' with '--grid'")
-    moves = {"spot_moves": spot_moves or MOVES if ladder or grid else (),
-             "vol_moves": vol_moves or MOVES if grid else ()}
+    moves = {"spot_moves": (MOVES if spot_moves is None else spot_moves) if ladder or grid else (),
+             "vol_moves": (MOVES if vol_moves is None else vol_moves) if grid else ()}
     with _progress() as (progress, notice):
         result = api.greeks(*files, progress=progress, notice=notice, **moves, **wishes)
     _show(result, as_json, _greeks_view)
@@ -132,13 +148,32 @@ def greeks(files: tuple[str, ...], as_json: bool, ladder: bool, grid: bool, spot
 
 @cli.command()
 @FILES
-@click.option("--path", type=click.Path(), help="Levels (YAML or CSV) to run through the contract.")
+@click.option("--solve", default="", metavar="TERM", help="At which value of this term is the contract worth the quote?")
+@click.option("--target", metavar="PRICE", help="Solve for this price instead: 99.5%, or money per unit.")
+@sampling
 @AS_JSON
-def readback(files: tuple[str, ...], path: str | None, as_json: bool) -> None:
+@click.option("--record", type=click.Path(), help="Write a valuation record to this new file.")
+def verify(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
+    """Can the dealer's quote be right? The gap, what holds it, and what would have to be true."""
+    from mcx import api
+
+    with _progress() as (progress, notice):
+        result = api.verify(*files, progress=progress, notice=notice, **wishes)
+    _show(result, as_json, _verify_view)
+    if not result.explained:
+        sys.exit(NO)
+
+
+@cli.command()
+@FILES
+@click.option("--path", type=click.Path(), help="Levels (YAML or CSV) to run through the contract.")
+@click.option("--calendar", is_flag=True, help="Fixings, decisions and payments to come, of all contracts.")
+@AS_JSON
+def readback(files: tuple[str, ...], path: str | None, calendar: bool, as_json: bool) -> None:
     """What does the contract say? Plain sentences, and every date."""
     from mcx import api
 
-    _show(api.readback(*files, path=path), as_json, _readback_view)
+    _show(api.readback(*files, path=path, calendar=calendar), as_json, _calendar_view if calendar else _readback_view)
 
 
 @cli.command()
@@ -199,9 +234,9 @@ def main(arguments: list[str] | None = None) -> None:
         _complain(str(trouble))
         sys.exit(WRONG)
     except click.ClickException as trouble:
-        context = getattr(trouble, "ctx", None)
-        hint = f" (see '{context.command_path} --help')" if context else ""
-        _complain(f"{trouble.format_message().rstrip('.')}{hint}")
+        context, said = getattr(trouble, "ctx", None), trouble.format_message().rstrip(".")
+        hint = f" (see '{context.command_path} --help')" if context and "\n" not in said else ""  # many lines: the help
+        _complain(f"{said}{hint}")
         sys.exit(WRONG)
     except (KeyboardInterrupt, click.Abort):
         _complain("interrupted before there was an estimate")
@@ -229,6 +264,14 @@ def _end_if_interrupted(result: Result, record: str | None) -> None:
 
 def _complain(text: str) -> None:
     click.echo(text, err=True)
+
+
+def _tell_in_a_pipe(text: str) -> None:
+    """Half a minute of compiling is not worth a line there."""
+    from mcx.machine.run import COMPILING
+
+    if text != COMPILING:
+        _complain(text)
 
 
 def _as_json(result: Result) -> str:
@@ -264,6 +307,13 @@ def _greeks_view(result: Result, page: Page) -> None:
         show_greeks(each, page)
 
 
+def _verify_view(result: Result, page: Page) -> None:
+    from mcx.report.verify_results import VerifyTable
+    from mcx.report.verify_view import show_verification, show_verifications
+
+    (show_verifications if isinstance(result, VerifyTable) else show_verification)(result, page)
+
+
 def _readback_view(result: Result, page: Page) -> None:
     from mcx.report.readback_view import show_readback
     from mcx.report.results import ReadbackTable
@@ -272,6 +322,12 @@ def _readback_view(result: Result, page: Page) -> None:
         if number:
             page.line()
         show_readback(each, page)
+
+
+def _calendar_view(result: Result, page: Page) -> None:
+    from mcx.report.readback_view import show_calendar
+
+    show_calendar(result, page)
 
 
 def _library_view(result: Result, page: Page) -> None:
@@ -288,9 +344,9 @@ def _replay_view(result: Result, page: Page) -> None:
 
 @contextmanager
 def _progress() -> Iterator[tuple[Callable | None, Callable | None]]:
-    """Callbacks that show progress on a terminal; none in a pipe."""
+    """Callbacks that show progress on a terminal; in a pipe no more than what takes very long is told."""
     if not sys.stderr.isatty():
-        yield None, None
+        yield None, _tell_in_a_pipe
         return
     from mcx.report.progress import Bar
 

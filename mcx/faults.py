@@ -59,5 +59,10 @@ class Refusal(ValueError):
 
 def did_you_mean(word: str, known: Iterable[str]) -> str:
     """'; did you mean 'strike'?' for a near miss, else the empty string."""
-    near = difflib.get_close_matches(word, list(known), n=1, cutoff=0.6)
-    return f"; did you mean '{near[0]}'?" if near else ""
+    near = nearest(word, known)
+    return f"; did you mean '{near}'?" if near else ""
+
+
+def nearest(word: str, known: Iterable[str]) -> str:
+    """The near miss among what is known, or ''."""
+    return next(iter(difflib.get_close_matches(word, list(known), n=1, cutoff=0.6)), "")

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping
 
 from helpers import Estimate, request_of
-from mcx.dates.dating import date_contract
+from mcx.dates.dating import date_on
 from mcx.estimators.greeks import Found, Wish, sensitivities
 from mcx.estimators.plan import Precision
 from mcx.estimators.price import Ready, prepare
@@ -16,7 +16,7 @@ Key = tuple[str, str, str]  # name, asset or pair or currency, tenor
 def ready(text: str, number: int = 0) -> tuple[Ready, object]:
     """A contract of a text made ready as the package does it, and the market."""
     request = request_of(text)
-    dated, faults = date_contract(request.contracts[number], request.market.valuation)
+    dated, faults = date_on(request.contracts[number], request.market)
     made, refused = prepare(dated, request.market)
     assert not faults and not refused, "\n".join(map(str, (*faults, *refused)))
     return made, request.market

@@ -14,7 +14,7 @@ import numpy as np
 from mcx.checked.load import Request, checked_request
 from mcx.checked.market import Market
 from mcx.dates.dated_contract import DatedContract
-from mcx.dates.dating import date_contract
+from mcx.dates.dating import date_on
 from mcx.leaves.market_map import MarketMap
 from mcx.machine.run import run, values_by_path
 from mcx.tape.program import Program
@@ -94,7 +94,7 @@ class Ready:
 def ready_of(request: Request, number: int = 0) -> Ready:
     """One contract of a request, made ready."""
     contract, market = request.contracts[number], request.market
-    dated, faults = date_contract(contract, market.valuation)
+    dated, faults = date_on(contract, market)
     assert dated is not None, "\n".join(map(str, faults))
     leaves = MarketMap.of(market, dated)
     assert not leaves.faults(), "\n".join(map(str, leaves.faults()))

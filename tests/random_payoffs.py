@@ -141,8 +141,9 @@ def contracts(draw: st.DrawFn) -> str:
     lines = []
     for number in range(draw(st.integers(1, 4))):
         kinds = Kinds(draw, readable)
-        lines += [f"  - at: dates{draw(st.sampled_from(['', '', '', '.last', '.but_last']))}", f"    name: event {number}",
-                  f"    if: {kinds.of('flag')}", "    then:", *actions(draw, kinds, settable, number, "      ")]
+        lines += [f"  - at: dates{draw(st.sampled_from(['', '', '', '.last', '.but_last']))}",
+                  f"    name: event {number}", f"    if: {kinds.of('flag')}", "    then:",
+                  *actions(draw, kinds, settable, number, "      ")]
         if draw(st.booleans()):
             lines += ["    else:", *actions(draw, kinds, settable, number + 10, "      ")]
     dates = draw(st.sampled_from([("[0.1y, 0.5y, 1.25y]", "[0.2y, 0.5y, 2y]", 3),

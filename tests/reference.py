@@ -16,9 +16,9 @@ from dataclasses import dataclass, field
 from plain_market import PlainMarket, bridge_high, bridge_low
 
 from mcx.checked import formula as trees
-from mcx.checked.contract import Figures, Word
+from mcx.checked.contract import Figures, LevelFixing, Word
 from mcx.checked.market import Market
-from mcx.checked.payoff import Assign, End, Event, Pay, Running
+from mcx.checked.payoff import Assign, Deliver, End, Event, Pay, Running
 from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Moment, Occasion, Update, Watch
 from mcx.faults import Place
 
@@ -113,6 +113,8 @@ class Walk:
         self.occasion: Occasion | None = None
         self.owner: Place | None = None
         self.result = Result()
+        self.schedules, self.levels = dated.schedules, {}  # by time, as the path goes
+        self.deliveries: list[tuple[Deliver, float, list[float], tuple[float, ...]]] = []
         for running in self.payoff.running:
             if running.start is not None:
                 self.values[running.name], self.counts[running.name] = self.evaluate(running.start), 1
@@ -181,7 +183,30 @@ class Walk:
                 return plain(rows[self.occasion.dates[self.payoff.term(name).per]])
             case Word(text=text):
                 return text == "true"
+            case LevelFixing(how=how):
+                days = self.schedules[name]
+                seen = [next(levels for time, levels in self.levels.items() if abs(time - day.time) < SAME_TIME)
+                        for day in days]
+                join = {"lowest": min, "highest": max}.get(how, lambda each: sum(each) / len(days))
+                return plain(tuple(map(join, zip(*seen, strict=True))))
         raise TypeError(f"'{name}' has no value in a formula")
+
+    def shares(self, action: Deliver) -> list[float]:
+        """How many shares of each asset for each unit of the notional, 0 for those that are not delivered."""
+        count = len(self.contract.assets)
+        numbers, chosen = (self.evaluate(each) if each is not None else True for each in (action.amount, action.which))
+        numbers, chosen = (row_of(each) if len(row_of(each)) == count else row_of(each) * count
+                           for each in (numbers, chosen))
+        return [number if taken else 0.0 for number, taken in zip(numbers, chosen, strict=True)]
+
+    def deliver(self, time: float, levels: tuple[float, ...]) -> None:
+        """The deliveries of a time: whole shares of each note at their level then, fractions at the level before."""
+        for action, due, numbers, before in [each for each in self.deliveries if abs(each[1] - time) < SAME_TIME]:
+            lot, worth = self.contract.denomination or 1.0, 0.0
+            for number, now, then in zip(numbers, levels, before, strict=True):
+                whole = math.floor(number * lot * (1 + 1e-12)) / lot
+                worth += whole * now + (number - whole) * then
+            self.result.payments.append(Payment(action.leg, action.part, due, worth * self.market.discount(due)))
 
     def look(self, occasion: Occasion | None, owner: Running | Event, levels: Value | None) -> None:
         """Formulas now speak of these levels and of this occasion of this running value or event."""
@@ -218,9 +243,14 @@ class Walk:
         kept, due = self.kept_for_next(formulas_of(event)), []
         for action in event.then if holds else event.otherwise:
             match action:
+                case Deliver():
+                    due.append(dated_event.due[action].time)
+                    self.deliveries.append((action, due[-1], self.shares(action), row_of(self.spot)))
                 case Pay(amount=amount, leg=leg, part=part):
                     (paid,) = row_of(self.evaluate(amount))
                     due.append(dated_event.due[action].time)
+                    if due[-1] < 0.0:
+                        continue  # paid already
                     self.result.payments.append(Payment(leg, part, due[-1], paid * self.market.discount(due[-1])))
                 case Assign(values=values):
                     self.values.update([(name, self.evaluate(right)) for name, right in values])
@@ -307,15 +337,29 @@ class Reference:
         walk.result.life = max((day.time for moment in self.dated.moments for event in moment.events
                                 for day in event.due.values()), default=0.0)
         starts = {self.snap(watch.start.time) for watch in self.dated.watches}
-        for time in sorted({0.0, *self.grid, *self.moments, *starts}):
+        ended, today = False, self.spots
+        fixed = {self.snap(day.time): day for days in self.dated.schedules.values() for day in days if day.time <= 0.0}
+        for time in sorted({0.0, *self.grid, *self.moments, *starts, *fixed}):
+            if time <= 0.0:
+                levels = self.fixings(fixed[time]) if time in fixed else today
             low = high = None
             if time in self.grid:
                 step = self.grid.index(time)
-                levels, low, high = self.advance(step, levels, logs, normal, uniform)
+                levels, low, high = self.advance(step, levels if step else today, logs, normal, uniform)
             known = time <= 0.0 or time in self.grid
-            if self.live(walk, time, plain(levels) if known else None, low, high):
+            walk.levels[time] = levels
+            ended = ended or self.live(walk, time, plain(levels) if known else None, low, high)
+            walk.deliver(time, levels)
+            if ended and not any(due > time + SAME_TIME for _, due, *_ in walk.deliveries):
                 break
         return walk.result
+
+    def fixings(self, day: Day) -> tuple[float, ...]:
+        """The levels that were fixed on a day, as published; today's level where there is none. For contracts without
+        adjustments, disrupted days and composite assets."""
+        fixed = self.market.market.fixings
+        return tuple(fixed.get(asset.name, {}).get(day.date, spot if day.time == 0.0 else math.nan)
+                     for asset, spot in zip(self.market.assets, self.spots, strict=True))
 
     def advance(self, step: int, levels: tuple[float, ...], logs: dict[int, float], normal: Callable[[int, int], float],
                 uniform: Callable[[int, int, str], float]) -> tuple[tuple[float, ...], Value, Value]:

@@ -100,7 +100,8 @@ def test_seconds(call: Path):
 
 @pytest.mark.parametrize(("options", "said"), [
     (("--paths", "1"), "one path has no error"), (("--paths", "0"), "'paths' is from 2"),
-    (("--paths", "many"), "not a valid integer"), (("--within", "2"), "ask for 'within' in bp or %"),
+    (("--paths", "many"), "not a valid integer"), (("--paths", "1.5e-1"), "not a valid integer"),
+    (("--paths", "1e99"), "'paths' is from 2"), (("--within", "2"), "ask for 'within' in bp or %"),
     (("--within", "nan"), "'within' is a half-width above 0"), (("--seconds", "nan"), "'seconds' is a time above 0"),
     (("--seconds", "-1"), "'seconds' is a time above 0"), (("--seed", "-1"), "'seed' is a whole number from 0"),
     (("--seed", str(2**64)), "'seed' is a whole number from 0"), (("--seed", "1.5"), "not a valid integer"),
@@ -109,6 +110,7 @@ def test_seconds(call: Path):
     (("--paths", "100", "--within", "1bp"), "'paths' and 'within' cannot both decide"),
     (("--paths", "100", "--seconds", "1"), "'paths' and 'seconds' cannot both decide"),
     (("--within", "1bp", "--seconds", "1"), "'within' and 'seconds' cannot both decide"),
+    (("--within", "1e-9bp"), "'within 1e-9 bp' needs about"),
     (("--pats", "100"), "--pats"), (("--paths",), "'--paths' requires an argument"),
 ])
 def test_wrong_options(options: tuple, said: str):
@@ -178,8 +180,7 @@ def test_payoffs():
     """All of them by name, whole words even where a name is long; one in full as its file has it."""
     listed = mcx("payoffs")
     assert listed.code == 0 and len(mcx("payoffs", "--json").json["payoffs"]) == len(shipped_names())
-    text = "".join(line[:24].strip() for line in listed.out.splitlines())
-    assert all(name in text for name in shipped_names())
+    assert all(f"\n{name}  " in f"\n{listed.out}" for name in shipped_names())
     one = mcx("payoffs", "autocall")
     assert (one.code, one.out) == (0, (EXAMPLES.parent / "autocall.yaml").read_text(encoding="utf-8"))
     found = mcx("payoffs", "autocall", "--json").json
@@ -197,6 +198,12 @@ def test_unknown_names():
     """A word that is near, or where to look."""
     refused(mcx("payoffs", "autocal"), "no payoff 'autocal' in the library; did you mean 'autocall'?")
     refused(mcx("prise"), "No such command 'prise'")
+
+
+def test_no_command():
+    """The help as it is, without a word where to find it."""
+    outcome = mcx()
+    assert outcome.code != 0 and outcome.err.strip() == mcx("--help").out.strip()
 
 
 @pytest.mark.parametrize("command", [(), ("price",), ("readback",), ("payoffs",), ("replay",)])

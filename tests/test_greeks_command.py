@@ -139,6 +139,14 @@ def test_a_ladder_marks_jumps(tmp_path: Path):
     assert "jump above" in mcx("greeks", file, *ASKED, "--ladder", "--spot-moves", "-2%,0,2%,4%").out
 
 
+@pytest.mark.parametrize(("barrier", "near"), [(100.5, True), (99.5, True), (103, False)])
+def test_a_condition_that_is_about_to_turn_is_told(tmp_path: Path, barrier: float, near: bool):
+    """Today's level is within 1 % of the barrier: no sensitivity shows the jump, so a warning does."""
+    file = written(tmp_path, TOUCH.replace("barrier: 101", f"barrier: {barrier}") + MARKET)
+    warnings = mcx("greeks", file, *ASKED, "--json").json["warnings"]
+    assert any("touch.yaml" in text and "turns where spots move by 1%" in text for text in warnings) == near
+
+
 def test_a_grid_of_spots_and_vols(call: Path):
     """Every pair of moves; a vol that would not be above 0 has no price but a reason."""
     result = mcx("greeks", call, *ASKED, "--grid", "--spot-moves", "-1%,1%", "--vol-moves", "-22%,0,3%", "--json").json
@@ -185,6 +193,7 @@ def test_below_twice_its_error_is_not_resolved(tmp_path: Path):
     (("--estimator", ""), "there is no estimator ''"),
     (("--bump", "0"), "'bump' is a size above 0"),
     (("--ladder", "--spot-moves", "-100%"), "stays above 0"),
+    (("--ladder", "--spot-moves", ""), "the spot moves are sizes such as"),
     (("--spot-moves", "1%"), "goes with '--ladder'"),
     (("--ladder", "--vol-moves", "1%"), "'--vol-moves' with '--grid'"),
     (("--paths", "4095"), "at least 4,096 paths"),

@@ -10,7 +10,7 @@ import pytest
 
 from greek_tools import by_name
 from mcx.checked.load import Request, load
-from mcx.dates.dating import date_contract
+from mcx.dates.dating import date_on
 from mcx.estimators.greeks import Wish, sensitivities
 from mcx.estimators.plan import Precision
 from mcx.estimators.price import prepare
@@ -44,7 +44,7 @@ def test_estimators_agree_with_revaluation(example: Path, number: int):
     """Within four errors, and what the revaluation's bias may be: how far two sizes of its moves are apart. The nodes
     of a curve of rates are left to their sum: they shift a drift so little that no path may cross a jump."""
     request = request_of(example)
-    dated, _ = date_contract(request.contracts[number], request.market.valuation)
+    dated, _ = date_on(request.contracts[number], request.market)
     made, _ = prepare(dated, request.market)
     paths = min(max(DRAWS // max(made.program.draws, 1), 1 << 12), 1 << 16)
     runs = [sensitivities(made, request.market, Wish(bump=size), Precision(paths=paths), seed=SEED) for size in SIZES]

@@ -64,8 +64,8 @@ SLIPS = {
                      "27:1: the key 'currency' stands here a second time; the first is at line 23, column 1"),
     "repeated term": ("  side: call", "  side: call\n  side: put",
                       "36:3: the key 'side' stands here a second time; the first is at line 35, column 3"),
-    "key of a later version": ("funding:", "fixings: {}\nfunding:",
-                               "39:1: 'fixings' is a key of a later version and is refused rather than ignored"),
+    "key of a later version": ("funding:", "borrow: {}\nfunding:",
+                               "39:1: 'borrow' is a key of a later version and is refused rather than ignored"),
     "wrong type": ("{harbour: 4180.2, lantern", "{harbour: high, lantern", "31:22: expected a number, found 'high'"),
     "bound broken": ("60%]", "160%]", "33:28: 'barrier' must be at most 150%, found '160%'"),
     "wrong kind": ("performance: worst(spot / initial)", "performance: spot / initial",
@@ -102,8 +102,9 @@ SLIPS = {
                           "32:39: 2027-06-01 is listed after 2027-09-01; dates are listed in order, each once"),
     "date before the valuation date": (
         "market: 2026-12-01", "market: 2027-03-02",
-        "32:14: 2027-03-01 lies before the valuation date 2027-03-02; a seasoned trade needs fixings, which a later "
-        "version reads"),
+        "37:9: 'Harbour, lantern and quarry averaging note' needs a fixing of 'harbour' on 2027-03-01",
+        "37:9: 'Harbour, lantern and quarry averaging note' needs a fixing of 'lantern' on 2027-03-01",
+        "37:9: 'Harbour, lantern and quarry averaging note' needs a fixing of 'quarry' on 2027-03-01"),
     "date before the start": ("start: 2026-12-01", "start: 2027-03-02",
                               "32:14: 2027-03-01 lies before the contract's start 2027-03-02"),
     "rule that misses its end": ("until: 2027-12-01", "until: 2027-12-08",
@@ -131,7 +132,9 @@ SLIPS = {
                                "10.3876% is the least that '3y' can have"),
     "correlation out of range": ("65%, harbour/q", "165%, harbour/q",
                                  "44:32: expected a correlation from -100% to 100%, found '165%'"),
-    "no correlation": (", lantern/quarry: 50%", "", "44:14: no correlation for 'lantern/quarry'"),
+    "no correlation": (", lantern/quarry: 50%", "",
+                       "44:14: no correlation for 'lantern/quarry'; write 'lantern/quarry: NUMBER%' under "
+                       "'correlation'"),
     "negative vol": ("vol: 22%", "vol: -22%", "42:57: expected a vol above 0% and up to 300%, found '-22%'"),
     "negative spot": ("spot: 801.1", "spot: -801.1", "42:19: expected an amount above 0, found '-801.1'"),
     "not finite": ("spot: 801.1", "spot: .nan", "42:19: expected a finite number, found '.nan'"),
@@ -193,9 +196,8 @@ def test_all_slips_at_once(tmp_path: Path):
 
 def test_slips_that_only_dates_and_markets_show_come_at_once_too(tmp_path: Path):
     """What documents say of each other, and what dates say, waits for no second round."""
-    text = slipped("list of the wrong length", "date before the valuation date", "vol in percent twice",
-                   "no correlation")
-    assert [line.split(": ")[0] for line in told(tmp_path, text)] == ["32:14", "33:12", "42:57", "44:14"]
+    text = slipped("list of the wrong length", "vol in percent twice", "no correlation")
+    assert [line.split(": ")[0] for line in told(tmp_path, text)] == ["33:12", "42:57", "44:14"]
 
 
 def test_watches_that_are_refused_beside_other_slips(tmp_path: Path):

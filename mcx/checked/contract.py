@@ -6,8 +6,8 @@ import datetime
 from dataclasses import dataclass, field
 from typing import TypeAlias
 
-from mcx.checked.payoff import Payoff
-from mcx.faults import Place
+from mcx.checked.payoff import OtherReading, Payoff
+from mcx.faults import Fault, Place
 
 
 @dataclass(frozen=True, slots=True)
@@ -81,7 +81,17 @@ class Word:
     place: Place
 
 
-TermValue: TypeAlias = DayRef | DayRule | DayList | Stretch | Figures | Word
+@dataclass(frozen=True, slots=True)
+class LevelFixing:
+    """The value of a `level` term that is observed rather than stated, for each asset: its level on a date (`how` is
+    'fixing'), or the 'average', 'lowest' or 'highest' of its levels on several."""
+
+    how: str
+    dates: DayRef | DayList | DayRule
+    place: Place
+
+
+TermValue: TypeAlias = DayRef | DayRule | DayList | Stretch | Figures | Word | LevelFixing
 
 
 def place_of(value: TermValue, position: int) -> Place:
@@ -108,6 +118,25 @@ class BusinessDays:
 
 
 @dataclass(frozen=True, slots=True)
+class Known:
+    """What a contract states about a date of its past: a value (flags as 1.0 and 0.0), a level, a factor, or another
+    date."""
+
+    value: float | datetime.date
+    place: Place
+
+
+@dataclass(frozen=True, slots=True)
+class ContractOtherwise:
+    """A contract in another reading of its payoff, None where it cannot be read so, and why. The dates that fall later
+    in that reading are not moved yet."""
+
+    reading: OtherReading
+    contract: Contract | None
+    faults: tuple[Fault, ...] = ()
+
+
+@dataclass(frozen=True, slots=True)
 class Contract:
     """One trade. Exactly one of `notional` and `units` is given. `textbook` contracts use times, others dates.
 
@@ -124,6 +153,7 @@ class Contract:
     place: Place  # of the title
     notional: float | None = None
     units: float | None = None
+    denomination: float | None = None  # of one note, where shares are delivered: only whole shares of it are
     start: DayRef | None = None
     day_count: str = ""
     settlement: Period | None = None
@@ -131,11 +161,20 @@ class Contract:
     payment_calendar: BusinessDays | None = None  # None: payments go by `calendar`
     textbook: bool = False
     conversion: dict[str, str] = field(default_factory=dict)  # 'quanto' or 'composite', by asset
+    happened: dict[str, dict[datetime.date, Known]] = field(default_factory=dict)  # by running value, as of the close
+    disruption: dict[str, dict[datetime.date, Known]] = field(default_factory=dict)  # by asset and scheduled date
+    adjustments: dict[str, dict[datetime.date, Known]] = field(default_factory=dict)  # by asset, from the date on
     text: str = ""
     assumptions: tuple[str, ...] = ()
     at_fault: frozenset[str] = frozenset()
     framed: bool = True
     terms_place: Place | None = None  # where a term that is missing would stand
+    otherwise: tuple[ContractOtherwise, ...] = ()  # in the other readings of its payoff
+
+    @property
+    def lot(self) -> float:
+        """What one note is of the notional, or one unit."""
+        return self.denomination or 1.0
 
     @property
     def size(self) -> float:

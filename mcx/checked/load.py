@@ -14,8 +14,11 @@ from pathlib import Path
 from mcx.checked.contract import Contract
 from mcx.checked.conversions import conversion_faults, conversions, read_conversion, simulated_rates
 from mcx.checked.curves import valuation_of
+from mcx.checked.dealer_quote import TEXTBOOK, DealerQuote, read_quote
+from mcx.checked.fixings import file_of
 from mcx.checked.library import Definitions, clashes, stands_for_shipped
 from mcx.checked.market import Market
+from mcx.checked.payoff import BOND, MULTIPLES
 from mcx.checked.read_contract import asset_names, read_contract
 from mcx.checked.read_market import read_market
 from mcx.checked.read_payoff import read_payoff
@@ -32,12 +35,14 @@ NO_FUNDING = "no issuer funding spread: the amounts are discounted at the market
 @dataclass(frozen=True, slots=True)
 class Request:
     """What was asked about: contracts in order of the files, the market if one was given, the definitions
-    used or given along, and all documents. Beside faults, contracts and market hold what could be read of them."""
+    used or given along, all documents, and the dealers' quotes. Beside faults, contracts and market hold what could be
+    read of them."""
 
     contracts: tuple[Contract, ...]
     market: Market | None
     payoffs: tuple[Document, ...]
     documents: tuple[Document, ...]
+    quotes: tuple[DealerQuote, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -90,9 +95,13 @@ def checked_request(
     faults += _only_one_market(kinds.get("market", []))
     faults += _same_title(kinds.get("contract", []))
     used: dict[str, Document] = {}
+    titled: dict[str, Contract | None] = {}
     contracts: list[Contract] = []
     markets = kinds.get("market", [])
-    market, wrong = read_market(markets[0]) if markets else (None, [])
+    tables, wrong = _tables(markets, kinds.get("fixings", []))
+    documents += tuple(table for table in tables if table not in documents)
+    faults += wrong
+    market, wrong = read_market(markets[0], tables[0] if tables else None) if markets else (None, [])
     faults += wrong
     for document in kinds.get("contract", []):
         contract, wrong = read_contract(document, definitions)
@@ -103,13 +112,32 @@ def checked_request(
         if market:
             pair = _pair(document.body, markets[0].body, contract, market)
             faults += [fault for check in CROSS_CHECKS for fault in check(pair)]
+        titled[contract.title if contract else text_of(document.body, "contract", [])] = contract
         if contract:
             contracts.append(_with_assumptions(contract, market) if market else contract)
     for document in own:
         if document not in used.values():
             faults += read_payoff(document)[1]
     payoffs = dict.fromkeys((*own, *used.values()))
-    return Request(tuple(contracts), market, tuple(payoffs), documents), sorted(set(faults))
+    quotes, wrong = _quotes(kinds.get("quote", []), titled, market)
+    return Request(tuple(contracts), market, tuple(payoffs), documents, quotes), sorted(set(faults + wrong))
+
+
+def _quotes(
+    documents: list[Document], contracts: dict[str, Contract | None], market: Market | None
+) -> tuple[tuple[DealerQuote, ...], list[Fault]]:
+    """The quotes, each of its own time and for one of the contracts."""
+    found, faults = [], []
+    for document in documents:
+        quote, wrong = read_quote(document, contracts.items())
+        faults += wrong
+        if quote is None:
+            continue
+        if market is not None and (quote.at == TEXTBOOK) != (market.valuation is None):
+            wanted = "a date, as the market is of one" if market.valuation else f"'{TEXTBOOK}', as the market is of time 0"
+            faults.append(Fault(document.body.get("at").place, f"expected {wanted}, found '{quote.at}'"))
+        found.append(quote)
+    return tuple(found), faults
 
 
 def _pair(contract_body: Mapping, market_body: Mapping, contract: Contract | None, market: Market) -> Pair:
@@ -120,6 +148,19 @@ def _pair(contract_body: Mapping, market_body: Mapping, contract: Contract | Non
         currency=read(contract_body, "currency", currency_code, said) or "",
         assets=asset_names(contract_body.get("assets"), said),
         contract=contract, market=market, contract_body=contract_body, market_body=market_body)
+
+
+def _tables(markets: list[Document], given: list[Document]) -> tuple[list[Document], list[Fault]]:
+    """The CSV file of fixings that the market names, taken from those given or read from its place."""
+    wanted = file_of(markets[0]) if markets else ""
+    found = [table for table in given if Path(table.file).absolute() == Path(wanted).absolute()] if wanted else []
+    faults = [Fault(Place(table.file, 1, 1), "no market names this file of fixings; write 'fixings: NAME.csv' in it")
+              for table in given if table not in found]
+    if wanted and not found:
+        found, wrong = read_documents([wanted])
+        place = markets[0].body.get("fixings").place
+        faults += [Fault(place, f"the fixings in '{wanted}': {fault.text}") for fault in wrong]
+    return found, faults
 
 
 def _only_one_market(markets: list[Document]) -> list[Fault]:
@@ -156,7 +197,9 @@ def _with_assumptions(contract: Contract, market: Market) -> Contract:
     conversion, said = conversions(contract.conversion, contract.currency, contract.assets, market)
     if contract.units is not None and contract.currency not in market.funding:
         said = (*said, NO_FUNDING)
-    return replace(contract, conversion=conversion, assumptions=(*contract.assumptions, *said))
+    others = tuple(replace(other, contract=other.contract and replace(other.contract, conversion=conversion))
+                   for other in contract.otherwise)
+    return replace(contract, conversion=conversion, otherwise=others, assumptions=(*contract.assumptions, *said))
 
 
 def conversions_known(pair: Pair) -> list[Fault]:
@@ -193,13 +236,21 @@ def rates_known(pair: Pair) -> list[Fault]:
 
 
 def funding_stated(pair: Pair) -> list[Fault]:
-    """A note's funding spread is stated, be it nil."""
+    """A note's funding spread is stated, be it nil: of what pays multiples of a notional, or has a bond in it."""
     currency, funding = pair.currency, pair.stated("funding")
-    if "notional" not in pair.contract_body or not currency or funding is None or currency in funding:
+    if not _is_note(pair) or not currency or funding is None or currency in funding:
         return []
     text = (f"no funding spread for '{currency}', the currency of the note '{pair.title}'; write "
             f"'funding: {{{currency}: 0 bp}}' to value it without the issuer's spread")
     return [Fault(_place(pair.market_body, "funding" if "funding" in pair.market_body else "market"), text)]
+
+
+def _is_note(pair: Pair) -> bool:
+    """Whether the contract's payments are promises of an issuer."""
+    if "notional" in pair.contract_body or pair.contract is None:
+        return "notional" in pair.contract_body
+    payoff = pair.contract.payoff
+    return payoff.pays == MULTIPLES or any(pay.part == BOND for pay in payoff.payments())
 
 
 def assets_known(pair: Pair) -> list[Fault]:
@@ -231,7 +282,10 @@ def correlations_known(pair: Pair) -> list[Fault]:
     place = _place(pair.market_body, "correlation" if "correlation" in pair.market_body else "market")
     missing = [f"{a}/{b}" for a, b in combinations(known, 2) if (a, b) not in stated and (b, a) not in stated]
     if missing:
-        return [Fault(place, f"no correlation for {listed(missing)}")]
+        lines = [f"{names}: NUMBER%" for names in missing]
+        line = f"{listed(lines)} under 'correlation'" if "correlation" in pair.market_body else \
+            f"'correlation: {{{', '.join(lines)}}}'"
+        return [Fault(place, f"no correlation for {listed(missing)}; write {line}")]
     quoted = pair.market.correlation | {names[::-1]: one for names, one in pair.market.correlation.items()}
     if len(known) < 3 or any(names not in quoted for names in combinations(known, 2)):
         return []

@@ -143,6 +143,9 @@ class Market:
     as_of: str = ""
     keys: tuple[str, ...] = field(default=())
     fx: dict[str, FxMarket] = field(default_factory=dict)
+    fixings: dict[str, dict[datetime.date, float]] = field(default_factory=dict)  # by asset, or rate of exchange
+    fixings_sound: bool = True  # whether all of them could be read
+    fixings_place: Place | None = None  # where they stand, or where they would
 
     def fx_between(self, one: str, other: str) -> FxMarket | None:
         """The rate of exchange of two currencies, whichever way it is quoted."""

@@ -11,6 +11,8 @@ from mcx.checked.formula import Formula
 from mcx.faults import Place
 
 MONEY, MULTIPLES = "money per unit", "multiples of the notional"
+BOND = "bond"  # the part of what an issuer owes in any case
+
 
 @dataclass(frozen=True, slots=True)
 class Term:
@@ -93,6 +95,14 @@ class Pay:
 
 
 @dataclass(frozen=True, slots=True)
+class Deliver(Pay):
+    """Deliver shares: `amount` of each asset for each unit of the notional (or each unit), of the assets for which the
+    flag `which` holds (None: all of them)."""
+
+    which: Formula | None = None
+
+
+@dataclass(frozen=True, slots=True)
 class Assign:
     """`set`: all right sides are read before any is written."""
 
@@ -128,6 +138,22 @@ class Event:
 
 
 @dataclass(frozen=True, slots=True)
+class OtherReading:
+    """Another reading of the definition, which its contracts are compared with.
+
+    `payoff` is the definition as it stands in that reading; `values` are the terms that have another value in it, as
+    located nodes by name; `later` are the date terms whose dates fall so many business days later.
+    """
+
+    name: str
+    about: str
+    place: Place
+    payoff: Payoff
+    values: tuple[tuple[str, object], ...] = ()  # text.located Nodes
+    later: tuple[tuple[str, int], ...] = ()
+
+
+@dataclass(frozen=True, slots=True)
 class Payoff:
     """A definition. `assets` is the fewest and the most assets it takes (most None: any number); `pays` is what its
     amounts are, MONEY or MULTIPLES, or '' where it is for the contract to say."""
@@ -141,6 +167,12 @@ class Payoff:
     place: Place
     assets: tuple[int, int | None] = (1, None)
     pays: str = ""
+    readings: tuple[OtherReading, ...] = ()
 
     def term(self, name: str) -> Term | None:
         return next((term for term in self.terms if term.name == name), None)
+
+    def payments(self) -> tuple[Pay, ...]:
+        """Every payment of its events, in file order."""
+        actions = [action for event in self.events for action in (*event.then, *event.otherwise)]
+        return tuple(action for action in actions if isinstance(action, Pay))

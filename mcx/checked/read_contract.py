@@ -11,12 +11,14 @@ import datetime
 from collections.abc import Mapping as MappingOf
 from dataclasses import replace
 
-from mcx.checked.contract import BusinessDays, Contract, DayRef, DayRule, Period, TermValue
+from mcx.checked.contract import BusinessDays, Contract, ContractOtherwise, DayRef, DayRule, Period, TermValue
 from mcx.checked.conversions import read_conversion
 from mcx.checked.day_count_names import day_count_name
 from mcx.checked.formula import Formula, Name, walk
-from mcx.checked.payoff import MONEY, MULTIPLES, Assign, Pay, Payoff
+from mcx.checked.payoff import MONEY, MULTIPLES, Assign, Deliver, OtherReading, Pay, Payoff
+from mcx.checked.read_history import read_adjustments, read_disruption, read_happened
 from mcx.checked.read_payoff import read_payoff
+from mcx.checked.read_readings import with_start
 from mcx.checked.read_terms import read_terms
 from mcx.checked.reading import (
     check_keys,
@@ -35,11 +37,12 @@ from mcx.faults import Fault, did_you_mean
 from mcx.text.located import Document, Mapping, Node, Scalar, Sequence
 from mcx.text.scalars import date, expected, period, shortened, word
 
-KEYS = ("contract", "currency", "notional", "units", "assets", "start", "day_count", "settlement", "calendar",
-        "payment_calendar", "conversion", "payoff", "terms")
+KEYS = ("contract", "currency", "notional", "units", "denomination", "assets", "start", "day_count", "settlement", "calendar",
+        "payment_calendar", "conversion", "payoff", "terms", "happened", "disruption", "adjustments")
 REQUIRED = ("contract", "currency", "assets", "payoff", "terms")
 CALENDAR_KEYS = ("start", "day_count", "settlement", "calendar", "payment_calendar")  # not for textbook contracts
-LATER = ("happened", "fixings", "adjustments", "rounding", "disruption")
+LATER = ("rounding",)
+PAST = ("happened", "disruption", "adjustments")
 LONGEST_LAG = 250  # business days, a year
 OPEN = ("in all", "in any")
 ROLLS = ("following", "modified following", "preceding")
@@ -66,19 +69,45 @@ def read_contract(
         check_keys(body, KEYS, REQUIRED, faults, "the contract", LATER)
         return None, faults + frame
     _check_size(body, payoff, faults)
+    denomination = _denomination(body, payoff, size.get("notional"), faults)
     reader = TermReader(payoff, assets, faults)
     values = reader.read(terms, body.place)
     textbook = _is_textbook(reader.written)
     _check_times(reader.written, textbook, values, faults)
     _check_keys(body, _is_dated(body, textbook, reader), payoff, frame)
-    return Contract(
+    contract = Contract(
         title=title, currency=currency or "", assets=assets, payoff=_begun(payoff, values), terms=values,
-        place=body.get("contract").place, notional=size.get("notional"), units=size.get("units"), start=start,
+        place=body.get("contract").place, notional=size.get("notional"), units=size.get("units"),
+        denomination=denomination, start=start,
         day_count=day_count or "", settlement=settlement, calendar=calendar, payment_calendar=payment_calendar,
-        textbook=textbook, conversion=conversion, text=document.text, terms_place=(terms or body).place,
+        textbook=textbook, conversion=conversion, happened=read_happened(body.get("happened"), payoff, faults),
+        disruption=read_disruption(body.get("disruption"), assets, faults),
+        adjustments=read_adjustments(body.get("adjustments"), assets, faults), text=document.text, terms_place=(terms or body).place,
         at_fault=reader.at_fault,
         framed=not frame and (textbook or (start and settlement and calendar) is not None),
-    ), faults + frame
+    )
+    if not faults and not frame:
+        others = tuple(_otherwise(reading, contract, terms, body.get("start")) for reading in payoff.readings)
+        contract = replace(contract, otherwise=others)
+    return contract, faults + frame
+
+
+def _otherwise(reading: OtherReading, contract: Contract, terms: Mapping, start: Node | None) -> ContractOtherwise:
+    """A sound contract in another reading of its payoff; `terms` as it states them."""
+    faults: list[Fault] = []
+    start = start or Scalar("0y", contract.place)
+    changed = {name: with_start(contract.payoff, node, start) for name, node in reading.values}
+    stated = {key.text: (key, changed.pop(key.text, value)) for key, value in terms.entries}
+    added = ((Scalar(name, node.place), node) for name, node in changed.items())
+    reader = TermReader(contract.payoff, contract.assets, faults)
+    values = reader.read(Mapping((*stated.values(), *added), terms.place), terms.place)
+    _check_times(reader.written, contract.textbook, values, faults)
+    if faults:
+        return ContractOtherwise(reading, None, tuple(faults))
+    # What the contract states may not count in this reading (a strike that the average takes the place of).
+    known = tuple(replace(term, optional=term.name not in values) for term in reading.payoff.terms)
+    payoff = replace(_begun(reading.payoff, values), terms=known)
+    return ContractOtherwise(reading, replace(contract, payoff=payoff, terms=values))
 
 
 def asset_names(node: Node | None, faults: list[Fault]) -> tuple[str, ...]:
@@ -115,6 +144,21 @@ def _check_size(body: Mapping, payoff: Payoff, faults: list[Fault]) -> None:
     if wrong in body and right not in body:
         text = f"'{payoff.name}' pays {payoff.pays}, which goes with '{right}', not with '{wrong}'"
         faults.append(Fault(body.key(wrong).place, text))
+
+
+def _denomination(body: Mapping, payoff: Payoff, notional: float | None, faults: list[Fault]) -> float | None:
+    """The nominal amount of one note: needed where shares are delivered, since only whole ones of each note are."""
+    delivers = any(isinstance(action, Deliver) for event in payoff.events for action in (*event.then, *event.otherwise))
+    found = read(body, "denomination", amount, faults)
+    if "denomination" in body and not (delivers and "notional" in body):
+        text = f"'{payoff.name}' delivers no shares" if not delivers else "with 'units' each unit is one note"
+        faults.append(Fault(body.key("denomination").place, f"{text}; leave out 'denomination'"))
+    elif delivers and notional is not None and "denomination" not in body:
+        faults.append(Fault(body.place, f"'denomination' is missing in the contract: '{payoff.name}' delivers whole "
+                                        "shares for each note and pays fractions in cash"))
+    elif found and notional and abs(notional / found - round(notional / found)) > 1e-9:
+        faults.append(Fault(body.get("denomination").place, "the notional is no whole number of notes of this size"))
+    return found
 
 
 def _payoff(
@@ -240,7 +284,7 @@ def _check_keys(body: Mapping, dated: bool, payoff: Payoff, faults: list[Fault])
     check_keys(body, KEYS, (*REQUIRED, *(("start", "settlement", "calendar") if dated else ())), faults, "the contract",
                LATER)
     if not dated:
-        for key in CALENDAR_KEYS:
+        for key in (*CALENDAR_KEYS, *PAST):
             if key in body:
                 text = f"'{key}' belongs to contracts with calendar dates; this one uses times"
                 faults.append(Fault(body.key(key).place, text))
@@ -261,6 +305,7 @@ def uses_period(payoff: Payoff) -> bool:
     formulas += [formula for running in payoff.running for formula in (running.formula, running.start)]
     formulas += [event.condition for event in payoff.events]
     formulas += [action.amount for action in actions if isinstance(action, Pay)]
+    formulas += [action.which for action in actions if isinstance(action, Deliver)]
     formulas += [right for action in actions if isinstance(action, Assign) for _, right in action.values]
     parts = (part for formula in formulas if formula is not None for part in walk(formula))
     return any(isinstance(part, Name) and part.name == "period" for part in parts)

@@ -6,7 +6,7 @@ import re
 
 from mcx.checked.formula import Formula
 from mcx.checked.names import Names
-from mcx.checked.payoff import Action, Assign, At, Continuous, End, Event, Pay
+from mcx.checked.payoff import Action, Assign, At, Continuous, Deliver, End, Event, Pay
 from mcx.checked.read_terms import few_enough
 from mcx.checked.reading import check_keys, items_of, later_version, listed, mapping_of, offered, one_of, read, text_of
 from mcx.faults import Fault, did_you_mean
@@ -14,8 +14,9 @@ from mcx.text.located import Mapping, Node, Scalar, Sequence
 from mcx.text.scalars import expected, shortened, word
 
 PARTS = ("first", "last", "but_first", "but_last")
-ACTIONS = ("pay", "set", "end")
+ACTIONS = ("pay", "deliver", "set", "end")
 OF_PAY = ("as", "part", "due")
+OF_DELIVER = (*OF_PAY, "of")
 KINDS_OF_LEG = ("bond", "coupon", "option")
 AT = re.compile(r"(\w+)(?:\.(\w+))?")
 
@@ -41,7 +42,7 @@ class EventReader:
         if not isinstance(node, Mapping):
             faults.append(expected("an event, beginning with '- at:'", node))
             return None
-        check_keys(node, ("from", "until", "name", "if", "then", "else", *ACTIONS, *OF_PAY), ("at",), faults,
+        check_keys(node, ("from", "until", "name", "if", "then", "else", *ACTIONS, *OF_DELIVER), ("at",), faults,
                    "the event")
         at = None if "at" not in node else self.at(node.get("at"), types=("date", "dates"))
         since, until = (self._date(node, key) for key in ("from", "until"))
@@ -54,15 +55,15 @@ class EventReader:
     def _what(self, node: Mapping) -> tuple[Formula | None, tuple[Action, ...], tuple[Action, ...]]:
         """Condition and actions: `if`, `then`, `else`, or one action written into the event itself."""
         faults = self.faults
-        bare = [key for key in (*ACTIONS, *OF_PAY) if key in node]
+        bare = [key for key in (*ACTIONS, *OF_DELIVER) if key in node]
         if "if" not in node:
             for key in ("then", "else"):
                 if key in node:
                     faults.append(Fault(node.key(key).place, f"'{key}' needs an 'if' in the same event"))
             if "then" not in node and "else" not in node:
                 if not any(key in ACTIONS for key in bare):
-                    faults.append(Fault(node.place, "nothing happens at this event: expected 'pay', 'set', 'end', or "
-                                                    "'if' and 'then'"))
+                    faults.append(Fault(node.place, "nothing happens at this event: expected 'pay', 'deliver', 'set', "
+                                                    "'end', or 'if' and 'then'"))
                     return None, (), ()
                 action = self._action_of(node)
                 return None, (action,) if action else (), ()
@@ -93,7 +94,7 @@ class EventReader:
         if not isinstance(node, Mapping):
             self.faults.append(expected("an action: 'pay: FORMULA', 'set: {NAME: FORMULA}' or 'end'", node))
             return None
-        if not check_keys(node, (*ACTIONS, *OF_PAY), (), self.faults, "an action"):
+        if not check_keys(node, (*ACTIONS, *OF_DELIVER), (), self.faults, "an action"):
             return None
         if not any(key in node for key in ACTIONS):
             self.faults.append(Fault(node.place, f"expected {listed(ACTIONS, 'or')} in an action"))
@@ -106,13 +107,16 @@ class EventReader:
         for key in stated[1:]:
             self.faults.append(Fault(node.key(key).place, f"'{key}' is a second action beside '{stated[0]}'; begin "
                                                           "it on a line of its own, under 'then' or in its own event"))
-        if stated[0] != "pay":
-            for key in OF_PAY:
-                if key in node:
-                    self.faults.append(Fault(node.key(key).place, f"'{key}' goes with 'pay' only"))
+        fits = {"pay": OF_PAY, "deliver": OF_DELIVER}.get(stated[0], ())
+        for key in OF_DELIVER:
+            if key in node and key not in fits:
+                goes = "'deliver' only" if key == "of" else "'pay' and 'deliver' only"
+                self.faults.append(Fault(node.key(key).place, f"'{key}' goes with {goes}"))
         match stated[0]:
             case "pay":
                 return self._pay(node)
+            case "deliver":
+                return self._deliver(node)
             case "set":
                 return self._assign(node)
         value = node.get("end")
@@ -123,10 +127,29 @@ class EventReader:
     def _pay(self, node: Mapping) -> Pay | None:
         faults = self.faults
         amount = self.names.one(node.get("pay"), faults, flag=False)
+        leg, part, due = self._leg(node)
+        return None if amount is None else Pay(amount, node.key("pay").place, leg, part, due)
+
+    def _deliver(self, node: Mapping) -> Deliver | None:
+        """`deliver:` how many shares, one number or one for each asset; `of:` a flag for each asset, or none."""
+        faults = self.faults
+        shares = self.names.formula(node.get("deliver"), faults)
+        which = self.names.formula(node.get("of"), faults) if "of" in node else None
+        for formula, flag in ((shares, False), (which, True)):
+            if formula is not None and formula.kind.is_flag is not flag:
+                wanted = "a flag, which says whether an asset is delivered" if flag else "numbers of shares"
+                faults.append(Fault(formula.place, f"expected {wanted}, found {formula.kind.value}"))
+                return None
+        leg, part, due = self._leg(node)
+        return None if shares is None else Deliver(shares, node.key("deliver").place, leg, part, due, which)
+
+    def _leg(self, node: Mapping) -> tuple[str, str, str]:
+        """To which leg and part an amount belongs, and when it is due."""
+        faults = self.faults
         leg = read(node, "as", word, faults) or "payment"
         part = one_of(node.get("part"), KINDS_OF_LEG, faults, "a part") if "part" in node else ""
         due = self._due(node.get("due")) if "due" in node else ""
-        return None if amount is None else Pay(amount, node.key("pay").place, leg, part or "", due)
+        return leg, part or "", due
 
     def _due(self, node: Node) -> str:
         known = ["same day", *(term.name for term in self.names.terms.values()

@@ -12,23 +12,25 @@ from collections.abc import Callable, Iterable
 from typing import TypeVar
 
 from mcx.checked.curves import MarketReader, correlation, valuation_of
+from mcx.checked.fixings import file_of, read_fixings
 from mcx.checked.market import Curve, FxMarket, Market, Quoted
 from mcx.checked.read_underlyings import read_asset, read_fx
 from mcx.checked.reading import check_keys, mapping_of, text_of, value_of
 from mcx.checked.values import currency_code
-from mcx.faults import Fault, did_you_mean
+from mcx.faults import Fault, Place, nearest
 from mcx.text.located import Document, Mapping, Node, Scalar
 from mcx.text.scalars import expected, percent
 
 T = TypeVar("T")
 
-KEYS = ("funding", "fx", "correlation", "uncertainty", "source", "as_of")
-LATER = ("fixings", "adjustments", "borrow")
+KEYS = ("funding", "fx", "correlation", "fixings", "uncertainty", "source", "as_of")
+LATER = ("borrow",)
 UNCERTAIN = ("rates", "funding", "spot", "yield", "forwards", "vol", "correlation")
 
 
-def read_market(document: Document) -> tuple[Market, list[Fault]]:
-    """The market that a document says, without what is at fault in it; and what is wrong."""
+def read_market(document: Document, table: Document | None = None) -> tuple[Market, list[Fault]]:
+    """The market that a document says, without what is at fault in it; and what is wrong. `table` is the CSV file of
+    fixings that it names."""
     body, faults = document.body, []
     valuation, textbook = valuation_of(body.get("market"), faults)
     reader = MarketReader(valuation, textbook, faults)
@@ -43,12 +45,17 @@ def read_market(document: Document) -> tuple[Market, list[Fault]]:
     if "assets" in body and not named.entries:
         faults.append(expected("assets by name", body.get("assets"), "there is none"))
     _check_rates_of_exchange(fx.values(), named, faults)
+    if textbook and "fixings" in body:
+        faults.append(Fault(body.key("fixings").place, "fixings have dates; a textbook market has none"))
+    before = len(faults)
+    fixings = read_fixings(body.get("fixings"), table, (*named.keys(), *fx), faults)
     market = Market(
         valuation=valuation, rates=rates, funding=funding, assets=assets,
         correlation=_correlations(reader, body.get("correlation"), (*named.keys(), *fx)),
         uncertainty=_uncertainty(reader, body.get("uncertainty")), place=body.get("market").place,
         source=text_of(body, "source", faults), as_of=text_of(body, "as_of", faults), keys=body.keys(),
-        fx=fx,
+        fx=fx, fixings=fixings, fixings_sound=len(faults) == before and (table is not None or not file_of(document)),
+        fixings_place=Place(table.file, 1, 1) if table else (body.key("fixings") or body.get("market")).place,
     )
     return market, faults
 
@@ -103,7 +110,7 @@ def _correlations(
             continue
         unknown = [name for name in names if name not in assets]
         for name in unknown:
-            faults.append(Fault(key.place, f"'{name}' is no asset of the market{did_you_mean(name, assets)}"))
+            faults.append(Fault(key.place, f"'{name}' is no asset of the market{_pair_meant(names, assets)}"))
         if names[0] == names[1] and not unknown:
             faults.append(expected("two different assets", key))
         elif names in found or names[::-1] in found:
@@ -112,6 +119,15 @@ def _correlations(
         elif quoted is not None:
             found[names] = quoted
     return found
+
+
+def _pair_meant(names: tuple[str, ...], assets: Iterable[str]) -> str:
+    """"; did you mean 'harbour/lantern'?" where each name is an asset or near one, else the empty string."""
+    meant: list[str] = []
+    for name, other in zip(names, names[::-1], strict=True):
+        others = (each for each in assets if each not in (other, *meant))
+        meant.append(name if name in assets else nearest(name, others))
+    return f"; did you mean '{'/'.join(meant)}'?" if all(meant) else ""
 
 
 def _uncertainty(reader: MarketReader, node: Node | None) -> dict[str, Quoted]:

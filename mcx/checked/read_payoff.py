@@ -14,6 +14,7 @@ from mcx.checked.kinds import Kind
 from mcx.checked.names import Names, in_order
 from mcx.checked.payoff import MONEY, MULTIPLES, Let, Payoff, Running, Term
 from mcx.checked.read_events import EventReader
+from mcx.checked.read_readings import read_readings
 from mcx.checked.read_terms import few_enough, read_terms, sound_name
 from mcx.checked.reading import check_keys, listed, mapping_of, one_of, read, text_of
 from mcx.checked.formula_syntax import names_in
@@ -21,7 +22,7 @@ from mcx.faults import Fault
 from mcx.text.located import Document, Mapping, Node, Scalar
 from mcx.text.scalars import expected, word
 
-KEYS = ("about", "assets", "pays", "terms", "let", "running")
+KEYS = ("about", "assets", "pays", "terms", "let", "running", "readings")
 HOWS = ("average", "total", "product", "lowest", "highest", "ever", "always", "latest")
 OF_FLAGS = ("ever", "always")
 OF_EITHER = ("total", "latest")
@@ -49,9 +50,15 @@ def read_payoff(
     found = reader.read()
     if faults or reader.faults or found is None or name is None:
         return None, faults + reader.faults
-    lets, running, events = found
-    place = body.get("payoff").place
-    return Payoff(name, about, terms, lets, running, events, place, (fewest, most), pays), []
+    payoff = Payoff(name, about, terms, *found, body.get("payoff").place, (fewest, most), pays)
+
+    def read_again(changed: Mapping) -> tuple[Payoff | None, list[Fault]]:
+        again = _Reader(changed, terms, count == 1, asset_names if assets else None)
+        lets, running, events = again.read()
+        return (None if again.faults else replace(payoff, lets=lets, running=running, events=events)), again.faults
+
+    readings, faults = read_readings(body, payoff, read_again)
+    return (None if faults else replace(payoff, readings=readings)), faults
 
 
 def _name(node: Node) -> str | Fault:

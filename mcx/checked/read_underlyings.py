@@ -15,7 +15,7 @@ from mcx.faults import Fault
 from mcx.text.located import Mapping, Node, Scalar
 from mcx.text.scalars import DATE, date, expected, percent, time
 
-LATER = ("adjustments", "fixings", "borrow", "strikes", "skew")
+LATER = ("borrow", "strikes", "skew")
 UNDERLYINGS = ("price", "total return")
 GIVEN_UP = ("yield", "dividends", "forwards")  # what a total-return index does not give up
 FX = re.compile("([A-Z]{3}) per ([A-Z]{3})")

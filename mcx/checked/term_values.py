@@ -9,7 +9,7 @@ from __future__ import annotations
 import re
 from collections.abc import Callable
 
-from mcx.checked.contract import DayList, DayRef, DayRule, Figures, Period, Stretch, TermValue, Word
+from mcx.checked.contract import DayList, DayRef, DayRule, Figures, LevelFixing, Period, Stretch, TermValue, Word
 from mcx.checked.payoff import Payoff, Term
 from mcx.checked.reading import check_keys, listed, offered, one_of, value_of
 from mcx.checked.values import amount
@@ -26,6 +26,7 @@ SOME_DATES = ("dates such as '[2026-11-16, 2027-05-17]', a rule such as '{from: 
               "every: 3 months}', or the name of another date term")
 A_WATCH = "dates, a rule of dates, the name of another date term, or '{continuous: [from, until]}'"
 MOST_STEPS = 10_000
+OBSERVED = ("fixing", "average", "lowest", "highest")
 NUMERIC: dict[str, Callable[[Node], float | Fault]] = {"number": number, "percent": percent, "level": amount}
 
 
@@ -75,8 +76,18 @@ class TermReader:
     def _word(self, text: str | None, node: Node) -> Word | None:
         return None if text is None else Word(text, node.place)
 
-    def _figures(self, term: Term, node: Node) -> Figures | None:
-        """One number, one for each date, one for each asset, or one for each of both."""
+    def _level_fixing(self, term: Term, node: Mapping) -> LevelFixing | None:
+        """`{fixing: DATE}`, `{average: DATES}`, `{lowest: DATES}` or `{highest: DATES}` in place of a level."""
+        if not check_keys(node, (), node.keys()[:1], self.faults, f"'{term.name}', which is observed"):
+            return None
+        (how, dates), = node.entries
+        found = self._day(dates) if how.text == "fixing" else self._days(term, dates)
+        return None if found is None else LevelFixing(how.text, found, node.place)
+
+    def _figures(self, term: Term, node: Node) -> Figures | LevelFixing | None:
+        """One number, one for each date, one for each asset, or one for each of both; or how a level is observed."""
+        if term.type == "level" and isinstance(node, Mapping) and set(node.keys()) & set(OBSERVED) - set(self.assets):
+            return self._level_fixing(term, node)
         if isinstance(node, Sequence) and term.per not in ("", "assets"):
             if not node.items:
                 self.faults.append(expected(f"one number for each date of '{term.per}'", node,

@@ -9,7 +9,7 @@ from mcx.text.located import Node, Scalar
 from mcx.text.scalars import expected, number
 
 CURRENCY = re.compile("[A-Z]{3}")
-ASSET = re.compile(r"\w[\w .&-]*")
+ASSET = re.compile(r"\w[\w.&-]*")  # no spaces: what stands beside a forgotten comma is no name
 
 
 def amount(node: Node) -> float | Fault:

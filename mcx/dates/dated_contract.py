@@ -9,19 +9,12 @@ from __future__ import annotations
 import datetime
 from dataclasses import dataclass
 
-from mcx.checked.contract import Contract
-from mcx.checked.payoff import Event, Pay, Running
+from mcx.checked.contract import Contract, LevelFixing
+from mcx.checked.payoff import Deliver, Event, Pay, Running
+from mcx.dates.day import Day
+from mcx.dates.history import NO_HISTORY, History
 
-
-@dataclass(frozen=True, slots=True)
-class Day:
-    """A point in time: years from the valuation date (Actual/365 Fixed) and the date (None in textbook contracts)."""
-
-    time: float
-    date: datetime.date | None = None
-
-    def __str__(self) -> str:
-        return self.date.isoformat() if self.date else f"{self.time:.10g}y"
+__all__ = ["Day", "DatedContract", "DatedEvent", "Moment", "Occasion", "Update", "Watch"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -86,7 +79,8 @@ class DatedContract:
     """Moments in order of time, and the continuous watches beside them.
 
     `schedules` gives the days of every date, dates and (dated) watch term. `calendar_version` names the holiday
-    package and its version, '' where no holidays were asked for. `assumptions` are sentences to print with any value.
+    package and its version, '' where no holidays were asked for. `assumptions` are sentences to print with any value. `history` is
+    what is known of its past.
     """
 
     contract: Contract
@@ -97,9 +91,23 @@ class DatedContract:
     watches: tuple[Watch, ...]
     calendar_version: str = ""
     assumptions: tuple[str, ...] = ()
+    history: History = NO_HISTORY
+
+    @property
+    def levels_fixed(self) -> tuple[tuple[str, Day], ...]:
+        """The days on which level terms that are observed are fixed, with their names."""
+        return tuple((name, day) for name, days in self.schedules.items() for day in days
+                     if isinstance(self.contract.terms.get(name), LevelFixing))
+
+    @property
+    def begun(self) -> bool:
+        """Whether some of its days lie before the valuation date."""
+        return any(days and days[0].time < 0.0 for days in self.schedules.values())
 
     @property
     def last(self) -> Day:
         """The last day on which anything is observed."""
         days = [moment.day for moment in self.moments] + [watch.end for watch in self.watches]
+        days += [due for moment in self.moments for event in moment.events for pay, due in event.due.items()
+                 if isinstance(pay, Deliver)]
         return max(days, key=lambda day: day.time)

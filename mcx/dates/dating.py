@@ -11,12 +11,14 @@ import datetime
 import math
 from dataclasses import replace
 
-from mcx.checked.contract import Contract, DayRef, Figures, Stretch, place_of
+from mcx.checked.contract import Contract, DayRef, Figures, LevelFixing, Stretch, place_of
+from mcx.checked.market import Market
 from mcx.checked.payoff import At, Continuous, Event, Pay, Payoff, Running
 from mcx.checked.term_values import DATED_TYPES, NUMERIC
 from mcx.dates.business_days import NotCovered, good_days
 from mcx.dates.dated_contract import Day, DatedContract, DatedEvent, Moment, Occasion, Update, Watch
 from mcx.dates.day_counts import ICMA, actual_365_fixed, year_fraction
+from mcx.dates.history import NO_HISTORY, History, history_of, said
 from mcx.dates.readable import readings
 from mcx.dates.rules import TermDays, part_of
 from mcx.faults import Fault, Place
@@ -25,7 +27,7 @@ WATCHABLE = ("lowest", "highest", "ever", "always")
 
 
 def date_contract(
-    contract: Contract, valuation: datetime.date | None
+    contract: Contract, valuation: datetime.date | None, history: History = NO_HISTORY
 ) -> tuple[DatedContract | None, list[Fault]]:
     """The contract with every date known, and the faults that only dates can show.
 
@@ -40,14 +42,22 @@ def date_contract(
         return None, faults
     base = None if contract.textbook else valuation or contract.start.date
     terms = TermDays(contract, base, good, paying, _payment_terms(contract.payoff))
-    dated_terms = [term.name for term in contract.payoff.terms if term.type in DATED_TYPES]
+    dated_terms = [term.name for term in contract.payoff.terms if term.type in DATED_TYPES
+                   or isinstance(contract.terms.get(term.name), LevelFixing)]
     found = {name: terms.of_term(name) for name in dated_terms if name in contract.terms}
     schedules = {name: days for name, days in found.items() if days}
     unread = frozenset(name for name in dated_terms if name in contract.at_fault or found.get(name) == ())
     start = Day(0.0) if contract.textbook else terms.day(contract.start.date)
-    dated, faults = _Dating(contract, valuation, schedules, unread, start, terms).dated()
+    dated, faults = _Dating(contract, valuation, schedules, unread, start, terms, history).dated()
     faults += terms.faults + _wrong_lengths(contract, schedules)
     return (None if faults or contract.at_fault else dated), sorted(set(faults))
+
+
+def date_on(contract: Contract, market: Market | None) -> tuple[DatedContract | None, list[Fault]]:
+    """The contract with every date, seen from the market's valuation date and with the past that the market knows."""
+    history, wrong = history_of(contract, market)
+    dated, faults = date_contract(contract, market.valuation if market else None, history)
+    return (None if wrong else dated), [*wrong, *faults]
 
 
 def _payment_terms(payoff: Payoff) -> frozenset[str]:
@@ -83,7 +93,7 @@ def _positions(contract: Contract, schedules: dict[str, tuple[Day, ...]]) -> dic
     """The terms of several dates that have a day among their dates, and where."""
     found: dict[Day, dict[str, int]] = {}
     for name, days in schedules.items():
-        if not isinstance(contract.terms[name], DayRef | Stretch):
+        if not isinstance(contract.terms[name], DayRef | Stretch | LevelFixing):
             for k, day in enumerate(days):
                 found.setdefault(day, {})[name] = k
     return found
@@ -93,7 +103,9 @@ class _Dating:
     """One contract on its way to a dated one; collects faults as it goes."""
 
     def __init__(self, contract: Contract, valuation: datetime.date | None,
-                 schedules: dict[str, tuple[Day, ...]], unread: frozenset[str], start: Day, terms: TermDays):
+                 schedules: dict[str, tuple[Day, ...]], unread: frozenset[str], start: Day, terms: TermDays,
+                 history: History):
+        self.history = history
         self.contract, self.payoff, self.valuation = contract, contract.payoff, valuation
         self.schedules, self.unread, self.start, self.terms = schedules, unread, start, terms
         self.good, self.paying = terms.observing, terms.paying
@@ -103,7 +115,6 @@ class _Dating:
         self.updates: dict[Day, list[Update]] = {}
         self.events: dict[Day, list[DatedEvent]] = {}
         self.watches: list[Watch] = []
-        self.past: dict[str, set[int]] = {}  # positions in the schedule of each term
         self.unwatched = False  # whether a watch is at fault, so that its running value has no date
 
     def dated(self) -> tuple[DatedContract | None, list[Fault]]:
@@ -113,9 +124,9 @@ class _Dating:
         for event in self.payoff.events:
             self._happen(event)
         days = sorted({*self.updates, *self.events}, key=lambda day: day.time)
-        self._refuse_past()
         if not self._can_be_read():
             return None, self.faults
+        self._refuse_needless_statements(days)
         if not days and not self.faults:
             self._fault(self.contract.place, "nothing is ever observed or paid: no event has a date")
         dated = DatedContract(
@@ -123,10 +134,28 @@ class _Dating:
             moments=tuple(Moment(day, tuple(self.updates.get(day, ())), tuple(self.events.get(day, ())))
                           for day in days),
             watches=tuple(self.watches), calendar_version=self._calendar_version(),
-            assumptions=(*self.contract.assumptions, *dict.fromkeys(self.assumptions)))
+            assumptions=(*self.contract.assumptions, *dict.fromkeys(self.assumptions),
+                         *said(self.contract, self.history)),
+            history=replace(self.history, eve=self._eve()))
         live, faults = readings(dated)
         faults += self.faults
         return (None if faults else _only(dated, live)), faults
+
+    def _refuse_needless_statements(self, days: list[Day]) -> None:
+        """Disrupted days on which nothing is observed, and statements about what is not watched all the time."""
+        fixed = [day for name, found in self.schedules.items() for day in found
+                 if isinstance(self.contract.terms[name], LevelFixing)]
+        observed = {day.date for day in (*days, *fixed)}
+        for asset, dates in self.contract.disruption.items():
+            for date, known in dates.items():
+                if date not in observed:
+                    self._fault(known.place, f"'{asset}' is not observed on {date}, so that no observation is moved")
+        watched = {watch.running.name for watch in self.watches}
+        for name, dates in self.contract.happened.items():
+            for known in dates.values():
+                if name not in watched:
+                    self._fault(known.place, f"'{name}' is not watched all the time in this contract: what happened follows "
+                                             "from its fixings")
 
     def _can_be_read(self) -> bool:
         """Whether all that decides which formulas are read is known: every term but numbers that must be stated."""
@@ -148,23 +177,18 @@ class _Dating:
 
     def _refuse_dates_before_start(self) -> None:
         for name, days in self.schedules.items():
-            if days[0].time < self.start.time:
+            if days[0].time < self.start.time and not isinstance(self.contract.terms[name], LevelFixing):
                 self._fault(place_of(self.contract.terms[name], 0),
                             f"{days[0]} lies before the contract's start {self.start}")
 
-    def _is_past(self, day: Day) -> bool:
-        """Whether a day is before the valuation date; one before the start is at fault already."""
-        return self.valuation is not None and self.start.time <= day.time < 0
-
-    def _refuse_past(self) -> None:
-        """Days before the valuation date on which something happens: one fault for each term that gives them."""
-        for name, positions in self.past.items():
-            days = [self.schedules[name][k] for k in sorted(positions)]
-            few = f"{days[0]} lies" if len(days) == 1 else f"{len(days)} dates, {days[0]} to {days[-1]}, lie"
-            what = "the start of the watch " if isinstance(self.contract.terms[name], Stretch) else ""
-            self._fault(place_of(self.contract.terms[name], min(positions)),
-                        f"{what}{few} before the valuation date {self.valuation}; a seasoned trade needs fixings, "
-                        "which a later version reads")
+    def _eve(self) -> datetime.date | None:
+        """The good business day before the valuation date: the last whose close can be known."""
+        if self.valuation is None or self.good is None:
+            return None
+        try:
+            return self.good.back(self.valuation - datetime.timedelta(days=1))
+        except NotCovered:
+            return self.valuation
 
     def _observe(self, running: Running) -> None:
         """The days of a running value: updates on dates, or a continuous watch."""
@@ -172,7 +196,7 @@ class _Dating:
         if at is None:
             return
         if isinstance(at, Continuous):
-            self._watch(running, *(self._end(end) for end in (at.start, at.end)), at.start.name, at.place)
+            self._watch(running, *(self._end(end) for end in (at.start, at.end)), at.place)
             return
         value = self.contract.terms.get(at.name)
         if isinstance(value, Stretch):
@@ -184,21 +208,19 @@ class _Dating:
                 self._fault(value.place, text)
                 self.unwatched = True
             else:
-                self._watch(running, *self.schedules[at.name], at.name, value.place)
+                self._watch(running, *self.schedules[at.name], value.place)
             return
         for occasion in self._occasions(at):
             update = Update(running, occasion, first=occasion.earlier is None)
             self.updates.setdefault(occasion.day, []).append(update)
 
-    def _watch(self, running: Running, start: Day | None, end: Day | None, name: str, place: Place) -> None:
+    def _watch(self, running: Running, start: Day | None, end: Day | None, place: Place) -> None:
         if start is None or end is None:  # an optional date that is not stated: nothing is watched
             return
         if end.time <= start.time:
             self._fault(place, f"the watch ends on {end}, not after its start on {start}")
             self.unwatched = True
         else:
-            if self._is_past(start):
-                self.past.setdefault(name, set()).add(self.schedules[name].index(start))
             self.watches.append(Watch(running, start, end))
 
     def _end(self, at: At) -> Day | None:
@@ -234,8 +256,6 @@ class _Dating:
             day = days[k]
             if not first <= day.time <= last:
                 continue
-            if self._is_past(day):
-                self.past.setdefault(at.name, set()).add(k)
             found.append(Occasion(
                 day=day, schedule="" if single else at.name, nth=k + 1, n_dates=len(days),
                 period=self._fraction(at.name, days[k - 1] if k else self.start, day, k, k == len(days) - 1),
@@ -317,9 +337,24 @@ def _only(dated: DatedContract, live: frozenset[str]) -> DatedContract:
         if updates or moment.events:
             moments.append(replace(moment, updates=updates))
     watches = tuple(watch for watch in dated.watches if watch.running.name in live)
-    today = [f"the observation on {moment.day}, the valuation date, uses the market's spot"
-             for moment in moments[:1] if moment.day.date and moment.day.date == dated.valuation]
+    today = [_today(dated) for moment in moments if moment.day.date and moment.day.date == dated.valuation]
     return replace(dated, moments=tuple(moments), watches=watches, assumptions=(*dated.assumptions, *today))
+
+
+def _today(dated: DatedContract) -> str:
+    """Which level an observation on the valuation date uses, for each asset."""
+    names, day = dated.contract.assets, Day(0.0, dated.valuation)
+    history = dated.history
+    fixed = [name for number, name in enumerate(names)
+             if history.level(number, history.observed(number, day)) is not None]
+    if len(fixed) == len(names):
+        what = "that day's fixing"
+    elif fixed:
+        spots = [name for name in names if name not in fixed]
+        what = f"that day's fixing of {', '.join(fixed)} and the market's spot of {', '.join(spots)}, not fixed yet"
+    else:
+        what = "the market's spot"
+    return f"the observation on {dated.valuation}, the valuation date, uses {what}"
 
 
 def _years(start: Day, day: Day) -> float:

@@ -29,7 +29,7 @@ from mcx.checked.formula import (
     Unary,
     children,
 )
-from mcx.checked.payoff import Action, Assign, At, End, Event, Pay, Running
+from mcx.checked.payoff import Action, Assign, At, Deliver, End, Event, Pay, Running
 from mcx.dates.dated_contract import Day, DatedContract, DatedEvent, Occasion
 from mcx.dates.day_counts import ICMA
 from mcx.faults import Fault, Place
@@ -196,6 +196,8 @@ class _Walk:
         for action in actions:
             if isinstance(action, Pay):
                 self._read(action.amount)
+                if isinstance(action, Deliver) and action.which is not None:
+                    self._read(action.which)
             elif isinstance(action, Assign):
                 values = [(name, self._read(right)) for name, right in action.values]
                 for name, value in values:
@@ -367,6 +369,7 @@ def _formulas(event: Event) -> list[Formula]:
     for action in (*event.then, *event.otherwise):
         if isinstance(action, Pay):
             found.append(action.amount)
+            found += [action.which] if isinstance(action, Deliver) and action.which is not None else []
         elif isinstance(action, Assign):
             found += [right for _, right in action.values]
     return found

@@ -11,7 +11,7 @@ import datetime
 from collections.abc import Iterator
 from fractions import Fraction
 
-from mcx.checked.contract import Contract, DayList, DayRef, DayRule, Period, Stretch
+from mcx.checked.contract import Contract, DayList, DayRef, DayRule, LevelFixing, Period, Stretch
 from mcx.dates.business_days import GoodDays, NotCovered
 from mcx.dates.dated_contract import Day
 from mcx.dates.day_counts import Regular, last_of_month
@@ -105,8 +105,10 @@ class TermDays:
             raise WrongDates(ref.place, f"'{ref.term}' has one date only, so '{ref.part}' leaves none")
         return found
 
-    def _days(self, value: DayRef | DayList | DayRule | Stretch) -> tuple[Day, ...]:
+    def _days(self, value: DayRef | DayList | DayRule | Stretch | LevelFixing) -> tuple[Day, ...]:
         match value:
+            case LevelFixing(dates=dates):
+                return self._days(dates)
             case DayRef():
                 return (self.single(value),)
             case DayList(days=(only,)) if only.term:

@@ -19,19 +19,29 @@ from mcx.estimators.batches import FEWEST_PATHS, Batches, Sampling
 from mcx.estimators.derivative_tape import pairs_of
 from mcx.estimators.differentiate import Coefficients, Differentiator
 from mcx.estimators.estimate import Estimate
-from mcx.estimators.ladder import Point, Step, grid, ladder
+from mcx.estimators.ladder import Point, Step, grid, ladder, spot_shifts, today, turning
 from mcx.estimators.methods import PATHWISE, Method, methods
+from mcx.estimators.pace import announce, pace
 from mcx.estimators.plan import Plan, Precision, plan
 from mcx.estimators.price import Ready
-from mcx.estimators.revalue import Revaluer, central_differences, impossible, second_differences, step_of
+from mcx.estimators.revalue import (
+    IN_PROPORTION,
+    RATES,
+    Revaluer,
+    central_differences,
+    impossible,
+    second_differences,
+    step_of,
+)
 from mcx.estimators.sensitivities import Curvature, Sensitivity, first_order, second_order
 from mcx.estimators.theta import between, theta
-from mcx.leaves.jacobian import Input, inputs, without_derivative
+from mcx.leaves.jacobian import Input, inputs, moved, without_derivative
 from mcx.machine.run import Notice, Stream, values_by_path
 from mcx.tape.smooth import Jump
 
 PILOT_PATHS = 1 << 14
 NEAR = 1.0 / 12.0  # years
+NEARBY = 0.01  # of the spots
 ESTIMATORS = ("auto", "pathwise", "likelihood", "mixed")
 REVALUATION = "revaluation"
 
@@ -137,7 +147,7 @@ class _Run:
                 points += self._grid(base)
             except KeyboardInterrupt:
                 self.interrupted = True
-        self.notes += [*between(self.ready.dated), *self._near(values)]
+        self.notes += [*between(self.ready.dated), *self._near(values), *self._turning()]
         return Found(price, tuple(values), tuple(self.refused), tuple(comparison), tuple(self.choices),
                      self.methods.jumps, tuple(rungs), tuple(points), tuple(self.notes), self.plan, self.sampling.seed,
                      time.perf_counter() - begun, self.interrupted)
@@ -160,8 +170,11 @@ class _Run:
                 self._bound(method).derivatives(replace(self.pilot, paths=max(paths, FEWEST_PATHS)))
             return time.perf_counter() - begun
 
-        found = plan(asked, prices, seconds_for, exact=program.outputs[0] < 0)
-        return replace(found, paths=max(found.paths, FEWEST_PATHS))
+        speed = pace((self._bound(method).program for method in self.methods.valid), self.pilot.threads)
+        found = plan(asked, prices, seconds_for, exact=program.outputs[0] < 0, pace=speed)
+        found = replace(found, paths=max(found.paths, FEWEST_PATHS))
+        announce(found.paths, speed, self.pilot.notice)
+        return found
 
     def _bound(self, method: Method) -> Differentiator:
         """A method's tape on the market as it stands."""
@@ -248,8 +261,17 @@ class _Run:
         first = self.ready.unrolled.grid.times[1:2]
         scored = any(value.what.name == "delta" and value.estimator != PATHWISE for value in values)
         if scored and first and first[0] < NEAR:
-            yield (f"the first simulated date is only {365.0 * first[0]:.3g} days away: the error of a likelihood "
-                   f"ratio's delta grows as the root of that time shrinks, that of its gamma as the time itself does")
+            yield (f"the first simulated date is only {_so_many(365.0 * first[0], 'day')} away: the error of a "
+                   f"likelihood ratio's delta grows as the root of that time shrinks, that of its gamma as the time "
+                   f"itself does; a ladder of spot moves says more")
+
+    def _turning(self) -> Iterator[str]:
+        """A word about conditions on today's levels that a small move of the spots turns."""
+        here, *there = (today(self.revaluer.tape, moved(self.market, spot_shifts(self._moving(), move)), self.contract)
+                        for move in (0.0, -NEARBY, NEARBY))
+        for place in turning(here, *there):
+            yield (f"the condition at {place} is decided by today's levels and turns where spots move by "
+                   f"{NEARBY:.0%}: the price may jump there, which no sensitivity shows; a ladder of spot moves does")
 
     def _moving(self) -> list[Input]:
         """The numbers that a ladder or a grid moves: spots and vols of the assets asked for."""
@@ -267,7 +289,7 @@ class _Run:
                 reasons = (impossible(self.market, self.contract, {number: side * step}) for side in (1.0, -1.0))
                 reason = next(filter(None, reasons), "")
                 if reason:
-                    self.notes.append(f"no revaluation for the {number}: moved by {step:g}, {reason}")
+                    self.notes.append(f"no revaluation for the {number}: moved by ±{step:g}, {reason}")
                 else:
                     steps[number] = step
         found = central_differences(self.revaluer, self.market, steps, self.sampling)
@@ -314,6 +336,13 @@ def _times(burden: float, best: float) -> str:
     return f"{burden / best:.3g} times as much for" if best > 0.0 else "not 0 for"
 
 
+def _so_many(number: float, unit: str) -> str:
+    written = f"{number:.3g}"
+    return f"{written} {unit}" if written == "1" else f"{written} {unit}s"
+
+
 def _bumped(number: Input, size: float) -> str:
+    if number.kind in IN_PROPORTION:
+        return f"moved by ±{100 * size:.3g} %"
     step = step_of(number, size)
-    return f"moved by ±{100 * size:.3g} %" if number.kind in ("spot", "forward") else f"moved by ±{step:g}"
+    return f"moved by ±{1e4 * step:.3g} bp" if number.kind in RATES else f"moved by ±{_so_many(100 * step, 'point')}"

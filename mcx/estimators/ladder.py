@@ -6,7 +6,7 @@ price jumps there, and the place of the condition is told.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
 
 from mcx.checked.contract import Contract
@@ -21,6 +21,7 @@ from mcx.tape.ops import OPS
 from mcx.tape.program import Tape
 from mcx.tape.registers import uniform_values
 
+Flags = Mapping[str, tuple[float, ...]]  # by the place of a condition on today's levels, as `today` finds them
 Deltas = Callable[[Market], Batches | None]  # derivatives by every spot that is moved, in order, (64, spots)
 
 
@@ -65,9 +66,9 @@ def ladder(
     for number, (move, there) in enumerate(zip(moves, markets, strict=True)):
         parts, price = revaluer.price(there, sampling)
         change = Batches(base.paths, parts.means - base.means).estimates()[0]
-        turning = _turning(flags[number], flags[number + 1]) if number + 1 < len(flags) else ()
+        places = turning(flags[number], flags[number + 1]) if number + 1 < len(flags) else ()
         slopes = deltas(there)
-        found.append(Step(move, price, change, slopes.estimates() if slopes else (), turning))
+        found.append(Step(move, price, change, slopes.estimates() if slopes else (), places))
     return tuple(found)
 
 
@@ -102,5 +103,7 @@ def today(tape: Tape, market: Market, contract: Contract) -> dict[str, tuple[flo
     return {place: tuple(flags) for place, flags in found.items()}
 
 
-def _turning(here: dict[str, tuple[float, ...]], there: dict[str, tuple[float, ...]]) -> tuple[str, ...]:
-    return tuple(sorted(place for place in {*here, *there} if here.get(place) != there.get(place)))
+def turning(here: Flags, *others: Flags) -> tuple[str, ...]:
+    """The places whose flags are not the same everywhere."""
+    places = {place for flags in (here, *others) for place in flags}
+    return tuple(sorted(place for place in places if any(here.get(place) != other.get(place) for other in others)))

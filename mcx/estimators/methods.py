@@ -8,6 +8,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from mcx.checked.contract import Contract
+from mcx.checked.conversions import simulated_rates
 from mcx.checked.market import Market
 from mcx.estimators.batches import Sampling
 from mcx.estimators.derivative_tape import DerivativeTape, derivative_tape, without_first_levels
@@ -27,6 +28,7 @@ PATHWISE, LIKELIHOOD, MIXED = "pathwise", "likelihood ratio", "mixed"
 GAMMAS = {PATHWISE: "likelihood ratio of the pathwise delta", LIKELIHOOD: "second-order likelihood ratio",
           MIXED: "mixed: likelihood ratio of the pathwise delta, second-order where payments jump"}
 ESCROWS = (LeafKind.ESCROW, LeafKind.MEAN_ESCROW)
+ESCROWED_BY = ("rate", "yield", "forward", "dividend", "dividend share", "decrement points")  # what the escrow hangs on
 COMPARED = (Op.LT, Op.LE, Op.EQ, Op.NE)
 SINGULAR = 1e-14  # an own variance below this share of the whole
 MOST_DRAWS = 64  # where every payment is smooth; the variance of a likelihood ratio grows with the steps
@@ -79,7 +81,8 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
     smooth = [payment for payment in paid if not found[payment]]
     places = tuple({(jump.kind, jump.place): jump for payment in jumping for jump in found[payment]}.values())
     leaf_values = dict(zip(tape.leaves, values, strict=True))
-    still = without_own_randomness(leaf_values, contract)
+    simulated = (*contract.assets, *simulated_rates(contract.conversion, contract.currency, market))
+    still = without_own_randomness(leaf_values, simulated)
 
     def by_path(with_basis: Tape) -> np.ndarray:
         return values_by_path(lower(with_basis, values), seed=pilot.seed, paths=pilot.paths, stream=pilot.stream,
@@ -94,10 +97,10 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
                                likelihood=likelihood, second=not still, proxy=proxy)
         refusals = {}
         if likelihood and (reason := read_today(tape, known)):
-            refusals["spot"] = reason
+            refusals |= {"spot": reason, "fx spot": reason}
         if likelihood and (reason := dividends_compared(tape, known)):
             blended = any(market.assets[name].blend for name in contract.assets)
-            refusals |= {kind: reason for kind in ("rate", "yield", *(("spot",) if blended else ()))}
+            refusals |= {kind: reason for kind in (*ESCROWED_BY, *(("spot",) if blended else ()))}
         if reason := still or second_order_trouble(tape, made):
             refusals["gamma"] = reason
         return Method(name, made, contract, refusals)
@@ -105,7 +108,7 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
     reason = f"the payoff jumps, and {still}" if still else ""
     if asked == "pathwise" and jumping:
         raise Refusal(f"'{contract.title}': no pathwise estimate, since the payoff jumps at {_listed(places)}; such an "
-                      f"estimate would miss the jump and show a small error")
+                      f"estimate would miss that and show a small error")
     if asked in ("likelihood", "mixed") and still and (jumping or asked == "likelihood"):
         raise Refusal(f"'{contract.title}': no likelihood ratio, since {still}")
     valid = []
@@ -121,8 +124,9 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
     return Methods(tuple(valid), places, reason)
 
 
-def without_own_randomness(values: dict[Leaf, float], contract: Contract) -> str:
-    """Why the paths have no density: an asset that does not move by itself, or as good as not; '' where all do."""
+def without_own_randomness(values: dict[Leaf, float], names: Sequence[str]) -> str:
+    """Why the paths have no density: an asset or a rate of exchange (by `names`) that does not move by itself, or as good
+    as not; '' where all do."""
     variances: dict[tuple[int, float], float] = {}
     for leaf, value in values.items():
         if leaf.kind is LeafKind.FACTOR:
@@ -130,7 +134,7 @@ def without_own_randomness(values: dict[Leaf, float], contract: Contract) -> str
     for leaf, value in values.items():
         if leaf.kind is LeafKind.FACTOR and leaf.asset == leaf.other:
             if value**2 <= SINGULAR * variances[leaf.asset, leaf.end]:
-                return (f"{contract.assets[leaf.asset]} has no randomness of its own between {leaf.start:.6g}y and "
+                return (f"{names[leaf.asset]} has no randomness of its own between {leaf.start:.6g}y and "
                         f"{leaf.end:.6g}y: no vol there, or a singular correlation matrix")
     return ""
 

@@ -32,6 +32,7 @@ FEWEST_PLANNED = 1 << 14
 LONGEST_SECONDS = 7 * 86400.0
 WITHIN = re.compile(r"([0-9]*\.?[0-9]+(?:[eE][+-]?[0-9]+)?)\s*(bp|%)?")
 UNITS = {"bp": 1e-4, "%": 1e-2}
+SPANS = ((365.25 * 86400.0, "years"), (86400.0, "days"), (3600.0, "hours"), (60.0, "minutes"), (1.0, "seconds"))
 
 
 @dataclass(frozen=True, slots=True)
@@ -112,11 +113,14 @@ def plan(
     prices: Callable[[int], np.ndarray],
     seconds_for: Callable[[int], float],
     exact: bool = False,
+    pace: float | None = None,
 ) -> Plan:
     """The plan for a request.
 
     `prices(n)` gives the price of each of the first n paths of the pilot's stream, shape (n,); `seconds_for(n)` runs n
-    paths of that stream and gives the time they took; `exact`: the price is the same on every path.
+    paths of that stream and gives the time they took; `exact`: the price is the same on every path; `pace`
+    is about the seconds that a path takes, for sentences. Raises RequestError for a half-width that needs more than
+    MOST_PATHS.
     """
     if asked.seconds is not None:
         return _by_time(asked, seconds_for)
@@ -124,10 +128,10 @@ def plan(
         return Plan(asked.paths or DEFAULT_PATHS, 0, asked.words)
     if exact:
         return Plan(FEWEST_PLANNED, 0, asked.words, asked.within)
-    return _by_half_width(asked, prices)
+    return _by_half_width(asked, prices, pace)
 
 
-def _by_half_width(asked: Precision, prices: Callable[[int], np.ndarray]) -> Plan:
+def _by_half_width(asked: Precision, prices: Callable[[int], np.ndarray], pace: float | None) -> Plan:
     """The paths that bring the 95 % half-width below the target, by the upper end of what the variance may be."""
     size = FIRST_PILOT
     found = prices(size)
@@ -141,8 +145,25 @@ def _by_half_width(asked: Precision, prices: Callable[[int], np.ndarray]) -> Pla
     wanted = (NORMAL_95 / asked.within) ** 2 * upper_variance(found)
     if warnings:
         wanted = max(wanted, size)
-    paths = whole_groups(min(max(wanted, FEWEST_PLANNED), MOST_PATHS))
+    if wanted > MOST_PATHS:
+        raise RequestError(_out_of_reach(asked, wanted, pace))
+    paths = whole_groups(max(wanted, FEWEST_PLANNED))
     return Plan(paths, size, asked.words, asked.within, tuple(warnings))
+
+
+def _out_of_reach(asked: Precision, wanted: float, pace: float | None) -> str:
+    """Why a half-width is refused, and which is not."""
+    taking = "" if pace is None else f", which would take about {duration(wanted * pace)}"
+    least = 1.05 * asked.within * math.sqrt(wanted / MOST_PATHS)  # no less than that when rounded to two digits
+    reached = f"{least / UNITS['bp']:.2g} bp" if asked.relative else f"{least:.2g}"
+    return (f"'{asked.words}' needs about {wanted:.2g} paths{taking}; at most {MOST_PATHS:,} are run, which reach "
+            f"about {reached}")
+
+
+def duration(seconds: float) -> str:
+    """'3 hours': two significant digits, in the largest unit of which there are two or more."""
+    length, unit = next((span for span in SPANS if seconds >= 2.0 * span[0]), SPANS[-1])
+    return f"{float(f'{seconds / length:.2g}'):,.12g} {unit}"
 
 
 def unlike(prices: np.ndarray) -> int:

@@ -11,10 +11,11 @@ import numpy as np
 from mcx.checked.market import Market
 from mcx.dates.dated_contract import DatedContract
 from mcx.estimators.estimate import Estimate, estimates
+from mcx.estimators.pace import announce, pace
 from mcx.estimators.plan import FEWEST_PATHS, Plan, Precision, plan
 from mcx.faults import Fault
 from mcx.leaves.market_map import MarketMap
-from mcx.machine.run import BlockSums, Notice, Stream, run, values_by_path
+from mcx.machine.run import BlockSums, Notice, Stream, load_kernels, run, values_by_path
 from mcx.tape.program import Output, Program
 from mcx.tape.registers import lower
 from mcx.tape.unroll import Unrolled, unroll
@@ -83,8 +84,9 @@ def value(
 ) -> Valuation:
     """The value of a contract; `threads` None takes all, and changes no digit.
 
-    `notice` is told if kernels must be compiled first. Raises NonFinitePath (of `machine.run`) where a path gives no
-    finite number, and KeyboardInterrupt if that comes before there is an estimate.
+    `notice` is told if kernels must be compiled first, and of a run that will take long. Raises RequestError where the
+    precision asked for cannot be reached, NonFinitePath (of `machine.run`) where a path gives no finite number, and
+    KeyboardInterrupt if that comes before there is an estimate.
     """
     outputs = ready.unrolled.tape.outputs
     assert outputs[0].kind == "price", "the price is the first output"
@@ -96,13 +98,16 @@ def value(
 
     def seconds_for(paths: int) -> float:
         begun = time.perf_counter()
-        run(ready.program, paths=paths, stream=Stream.PILOT, notice=notice, **how)
+        run(ready.program, paths=paths, stream=Stream.PILOT, **how)
         return time.perf_counter() - begun
 
-    planned = plan(asked, prices, seconds_for, exact=price.outputs[0] < 0)
+    load_kernels(ready.program, notice)  # before any clock starts
+    speed = pace([ready.program], threads)
+    planned = plan(asked, prices, seconds_for, exact=price.outputs[0] < 0, pace=speed)
+    announce(planned.paths, speed, notice)
     begun = time.perf_counter()
     sums = run(ready.program, paths=planned.paths, snapshots=[planned.paths // share for share in SHARES],
-               progress=_counted(progress, planned), notice=notice, **how)
+               progress=_counted(progress, planned), **how)
     seconds = time.perf_counter() - begun
     if sums.paths < FEWEST_PATHS:
         raise KeyboardInterrupt

@@ -9,6 +9,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from mcx.checked.contract import Contract
+from mcx.checked.conversions import simulated_rates
 from mcx.checked.market import Market
 from mcx.estimators.batches import Batches, Sampling
 from mcx.estimators.estimate import Estimate
@@ -20,7 +21,8 @@ from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Leaf, LeafKind, Sum, Tape
 from mcx.tape.registers import lower
 
-RATES = ("rate", "yield", "funding")  # moved by a tenth of what vols are moved by
+IN_PROPORTION = ("spot", "forward", "fx spot", "dividend", "decrement points")
+RATES = ("rate", "yield", "funding", "dividend share", "decrement")  # moved by a tenth of what vols are moved by
 ROUNDING = 1e-12
 
 
@@ -61,9 +63,9 @@ def seen_from(leaves: Iterable[Leaf], later: float) -> list[Leaf]:
 
 
 def step_of(number: Input, size: float) -> float:
-    """How far a number is moved by a bump of this size: spots and forwards by that share of themselves, vols and
-    correlations by the size itself, rates, yields and spreads by a tenth of it."""
-    if number.kind in ("spot", "forward"):
+    """How far a number is moved by a bump of this size: spots, forwards, rates of exchange and cash dividends by
+    that share of themselves, vols and correlations by the size itself, rates, yields and spreads by a tenth of it."""
+    if number.kind in IN_PROPORTION:
         return size * number.value
     return size / 10.0 if number.kind in RATES else size
 
@@ -81,7 +83,8 @@ def impossible(market: Market, contract: Contract, shifts: Mapping[Input, float]
             return f"a vol of {name} would not be above 0"
         if any(total < held * (1.0 - ROUNDING) for held, total in zip(variances, variances[1:], strict=False)):
             return f"the total variance of {name} would fall from one node to the next"
-    matrix = correlation_matrix(there.correlation, contract.assets)
+    names = (*contract.assets, *simulated_rates(contract.conversion, contract.currency, there))
+    matrix = correlation_matrix(there.correlation, names)
     if np.abs(matrix).max() > 1.0 or np.linalg.eigvalsh(matrix)[0] < -ROUNDING * len(matrix):
         return "the correlations would not belong to any joint law"
     return ""

@@ -2,10 +2,11 @@
 numbers.
 
 delta per 1 of spot, and for a move of 1 % as percent of the notional; vega and correlation per point (1 %); rho, yield
-and funding per basis point of a zero rate; forwards per 1. Everything but the second delta is in the contract's
-currency for the whole notional or number of units. Where a curve has several nodes there is one line for each and one
-for all of them together, whose value is their sum. Gamma is the change of delta (per 1 of spot) for a move of the spot
-by 1 %.
+and funding per basis point of a zero rate; forwards per 1; dividends per 1 of cash or per basis point of the level, a
+decrement per basis point or point a year; a rate of exchange per 1, its vol and correlations per point. Everything but
+the second delta is in the contract's currency for the whole notional or number of units. Where a curve has several nodes
+there is one line for each and one for all of them together, whose value is their sum. Gamma is the change of delta (per 1
+of spot) for a move of the spot by 1 %.
 """
 
 from __future__ import annotations
@@ -22,9 +23,14 @@ from mcx.leaves.jacobian import Input
 ALL = "all"  # the tenor of a parallel move
 POINT, BASIS_POINT = 1e-2, 1e-4
 NAMES = {"spot": "delta", "vol": "vega", "rate": "rho", "yield": "yield", "funding": "funding", "forward": "forward",
-         "correlation": "correlation"}
+         "correlation": "correlation", "dividend": "dividend", "dividend share": "dividend share",
+         "decrement": "decrement", "decrement points": "decrement", "fx spot": "fx delta", "fx vol": "fx vega",
+         "fx correlation": "fx correlation"}
 UNITS = {"vol": (POINT, "per vol point"), "rate": (BASIS_POINT, "per bp"), "yield": (BASIS_POINT, "per bp"),
-         "funding": (BASIS_POINT, "per bp"), "forward": (1.0, "per 1 of forward"), "correlation": (POINT, "per point")}
+         "funding": (BASIS_POINT, "per bp"), "forward": (1.0, "per 1 of forward"), "correlation": (POINT, "per point"),
+         "dividend": (1.0, "per 1 of cash"), "dividend share": (BASIS_POINT, "per bp"), "decrement": (BASIS_POINT, "per bp"),
+         "decrement points": (1.0, "per point a year"), "fx spot": (1.0, "per 1 of the rate"),
+         "fx vol": (POINT, "per vol point"), "fx correlation": (POINT, "per point")}
 
 
 @dataclass(frozen=True, slots=True)

@@ -59,6 +59,16 @@ def moves_of(moves: Sequence[str | float], what: str) -> tuple[float, ...]:
     return tuple(sorted(found))
 
 
+def target_of(target: str | float | None) -> float | None:
+    """A price to solve a term for, in the unit of the contract's price: '99.5%' of the notional, or money per unit."""
+    if target is None:
+        return None
+    found = _share(target)
+    if found is None:
+        raise RequestError(f"'target' is a price such as '99.5%' of the notional, or money per unit, not '{target}'")
+    return found
+
+
 def _parted(values: str | Sequence) -> Sequence:
     return [part.strip() for part in values.split(",")] if isinstance(values, str) else values
 

@@ -154,6 +154,13 @@ class Crew:
             pass
         return means, squares, bad, sums[:groups]
 
+    def load(self) -> None:
+        """Compiles the kernel, or loads what is compiled, by a run over no paths."""
+        outputs = len(self.code.outputs)
+        means, squares, sums = (np.empty((0, width)) for width in (outputs, outputs, self.code.sums))
+        sweep(self.code.code, self.code.scalars, self.code.outputs, self._drawing, _numbered(range(0), 0, 0), 0,
+              *self._rooms[0], means, squares, np.empty(0, dtype=np.int64), sums, np.empty((0, outputs)))  # fmt: skip
+
     def _room(self) -> tuple[np.ndarray, ...]:
         """Registers, random words and what else one thread works in.
 

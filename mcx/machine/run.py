@@ -23,6 +23,7 @@ class Stream(IntEnum):
 
     MAIN = 0
     PILOT = 1
+    FRESH = 2
     REPLICATE = 1 << 16
 
 
@@ -262,6 +263,15 @@ def draws(
 def available_threads() -> int:
     """How many processors this process may run on."""
     return len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
+
+
+def load_kernels(program: Program, notice: Notice | None = None) -> None:
+    """Compiles the kernels or loads them, so that a clock that starts after it counts the time of paths alone.
+
+    `notice` is called with a sentence if they have to be compiled.
+    """
+    with _crew(prepare(program), 0, Stream.MAIN, 1, None, notice) as crew:
+        crew.load()
 
 
 def _crew(code: KernelCode, seed: int, stream: int, threads: int | None, lanes: int | None,

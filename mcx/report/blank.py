@@ -8,7 +8,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Sequence
 from itertools import combinations
 
-from mcx.checked.payoff import MONEY, MULTIPLES, Payoff, Term
+from mcx.checked.payoff import MONEY, MULTIPLES, Deliver, Payoff, Term
 from mcx.checked.read_contract import uses_period
 from mcx.report.wording import figure
 
@@ -26,7 +26,7 @@ WRITTEN = {
     "level": "in the asset's currency",
     "date": "as 2027-11-16",
     "dates": "as {from: 2027-02-16, until: 2029-11-16, every: 3 months}, or a list",
-    "watch": "a date, dates, or {continuous: [2026-12-01, 2027-12-01]}",
+    "watch": "a date, dates, another term's as observations.last, or {continuous: [2026-12-01, 2027-12-01]}",
     "flag": "true or false",
 }
 
@@ -46,6 +46,8 @@ def _contract(payoff: Payoff, assets: Sequence[str]) -> Iterator[str]:
     yield f"contract: New {payoff.name.replace('_', ' ')} on {' and '.join(assets)}"
     yield _line("currency", about="as EUR")
     yield _line(*SIZES[payoff.pays])
+    if any(isinstance(action, Deliver) for event in payoff.events for action in (*event.then, *event.otherwise)):
+        yield _line("denomination", about="nominal amount of one note: only whole shares of it are delivered")
     yield f"assets: [{', '.join(assets)}]"
     yield _line("start", about="date from which periods and years count")
     if uses_period(payoff):

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterable
 
 from mcx.checked.formula import Binary, Formula, IfElse, Number
-from mcx.checked.payoff import Action, Assign, End, Event, Pay, Payoff
+from mcx.checked.payoff import Action, Assign, Deliver, End, Event, Pay, Payoff
 from mcx.dates.dated_contract import DatedContract, Day
 from mcx.report.results import EventLine
 from mcx.report.settled import Settled
@@ -71,6 +71,8 @@ def _doing(actions: Iterable[Action], event: Event, dated: DatedContract, words:
     done = []
     for action in actions:
         match action:
+            case Deliver():
+                done.append(_delivering(action, event, dated, words, settled))
             case Pay():
                 done.append(_paying(action, event, dated, words, settled))
             case Assign(values=pairs):
@@ -87,6 +89,15 @@ def _paying(pay: Pay, event: Event, dated: DatedContract, words: Words, settled:
     leg = f" as '{pay.leg}'" if pay.leg != "payment" else ""
     part = f" (part: {pay.part})" if pay.part and pay.part != pay.leg else ""
     return f"pays {_amount(amount, dated, words)}{leg}{part}, {_due(pay, event, dated)}"
+
+
+def _delivering(action: Deliver, event: Event, dated: DatedContract, words: Words, settled: Settled) -> str:
+    """How many shares of which assets."""
+    leg = f" as '{action.leg}'" if action.leg != "payment" else ""
+    which = "" if action.which is None else f" of each asset of which {words.formula(settled.formula(action.which))}"
+    unit = "for each unit" if dated.contract.notional is None else "for each unit of the notional"
+    return (f"delivers {words.formula(settled.formula(action.amount))} shares {unit}{which}{leg}, worth their level then, "
+            f"fractions in cash, {_due(action, event, dated)}")
 
 
 def _amount(amount: Formula, dated: DatedContract, words: Words) -> str:

@@ -43,7 +43,8 @@ class Refused(Result):
 
 @dataclass(frozen=True, slots=True)
 class Jump(Result):
-    """What makes a payment jump: a 'condition', or a 'division' by what may be 0, and where in which file it stands."""
+    """What makes a payment jump: a 'condition', a 'division' by what may be 0, or a 'root' (also a log) of what may be
+    0, which has no bounded slope there; and where in which file it stands."""
 
     kind: str
     place: str

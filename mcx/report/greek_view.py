@@ -26,7 +26,7 @@ def show_greeks(result: GreeksResult, page: Page) -> None:
         ("seed", f"{result.seed}; variance reduction: {result.reduction}; estimator asked for: {result.estimator}"),
     ))
     page.heading("sensitivities (sampling error only)")
-    page.table(("", "value", "error", "unit", "by"), (greek_row(each, each.estimator) for each in result.greeks), last=2)
+    page.table(("", "value", "error", "unit", "by"), (greek_row(one, one.estimator) for one in result.greeks), last=2)
     if result.refused:
         page.heading("not given")
         said: dict[str, list[str]] = {}
@@ -35,14 +35,15 @@ def show_greeks(result: GreeksResult, page: Page) -> None:
         page.items(f"{', '.join(names)}: {reason}" for reason, names in said.items())
     if result.comparison:
         page.heading("for comparison: revaluation on the same random numbers, biased by the size of the move")
-        page.table(("", "value", "error", "unit", ""), (greek_row(each, each.note) for each in result.comparison), last=2)
+        page.table(("", "value", "error", "unit", ""), (greek_row(one, one.note) for one in result.comparison), last=2)
     if result.jumps:
-        page.heading("the payoff jumps here: no pathwise estimate of the payments behind it")
+        page.heading("the payoff jumps here, or has no bounded slope: no pathwise estimate of the payments behind it")
         page.items(f"{jump.kind} at {jump.place or 'an unnamed place'}" for jump in result.jumps)
     if result.ladder:
-        page.heading("spots moved together, same random numbers")
+        named = "spots moved together" if not result.assets else f"only the spot of {', '.join(result.assets)} moved"
+        page.heading(f"{named}, same random numbers")
         heads = [f"delta {delta.asset}" for delta in result.ladder[0].deltas]
-        page.table(("spot", unit, "change", "error", *heads, ""),
+        page.table(("spot", unit, f"change, {result.currency}", "error", *heads, ""),
                    (rung_row(rung, factor, places) for rung in result.ladder), words=0, last=1)
     if result.grid:
         _grid(result, factor, places, page)
@@ -71,7 +72,8 @@ def rung_row(rung: Rung, factor: float, places: int) -> tuple[str, ...]:
 
 
 def _grid(result: GreeksResult, factor: float, places: int, page: Page) -> None:
-    page.heading("price by move of all spots (down) and of all vols (across), same random numbers")
+    moved = "all" if not result.assets else f"{', '.join(result.assets)} only:"
+    page.heading(f"price by move of {moved} spots (down) and vols (across), same random numbers")
     vols: Sequence[float] = result.vol_moves
     at = {(point.spot_move, point.vol_move): point for point in result.grid}
 
@@ -80,14 +82,19 @@ def _grid(result: GreeksResult, factor: float, places: int, page: Page) -> None:
             found = [at[spot, vol] for vol in vols]
             yield (move(spot), *("none" if point.refused else fixed(point.price * factor, places) for point in found))
 
-    page.table(("spot", *(f"{move(vol)} vol" for vol in vols)), rows(), words=0)
+    page.table(("spot", *(f"vol {points(vol)}" for vol in vols)), rows(), words=0)
     errors = [point.standard_error for point in result.grid if not point.refused]
     if errors:
         page.line(f"  standard errors of at most {fixed(max(errors) * factor, places)}")
-    page.items(dict.fromkeys(f"vol {move(point.vol_move)}, spot {move(point.spot_move)}: {point.refused}"
+    page.items(dict.fromkeys(f"vol {points(point.vol_move)}, spot {move(point.spot_move)}: {point.refused}"
                              for point in result.grid if point.refused))
 
 
 def move(share: float) -> str:
     """A move as '+2.5 %'."""
     return f"{100.0 * share:+.4g} %" if share else "0 %"
+
+
+def points(change: float) -> str:
+    """A change of a vol as '+2 points'."""
+    return f"{100.0 * change:+.4g} points" if change else "0"

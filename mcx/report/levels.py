@@ -8,7 +8,6 @@ Textbook contracts write times, `0.25y`, in place of dates.
 
 from __future__ import annotations
 
-import csv
 import datetime
 from collections.abc import Callable
 
@@ -18,6 +17,7 @@ from mcx.faults import Fault, Place, did_you_mean
 from mcx.text.located import Mapping, Node, Scalar
 from mcx.text.scalars import date, expected, time
 from mcx.text.source import decoded
+from mcx.text.tables import read_table
 from mcx.text.yaml12 import read_yaml
 
 Levels = dict[str, dict[Day, float]]
@@ -31,7 +31,7 @@ def read_levels(data: bytes, file: str, dated: DatedContract) -> tuple[Levels, l
         reader.csv(data, file)
     else:
         reader.yaml(data, file)
-    return reader.levels, reader.faults
+    return reader.levels, sorted(reader.faults)
 
 
 class _Reader:
@@ -67,7 +67,8 @@ class _Reader:
         if isinstance(text, Fault):
             self.faults.append(text)
             return
-        rows = self._rows(text, file)
+        rows, wrong = read_table(text, file)
+        self.faults += wrong
         head = rows[0] if rows else []
         if len(head) < 2 or head[0].text != "date":
             self.faults.append(Fault(Place(file, 1, 1), "expected a first line 'date,' and the assets, as "
@@ -80,30 +81,14 @@ class _Reader:
             elif self._is_asset(name):
                 columns[name.text] = number
         for cells in rows[1:]:
-            if not any(cell.text for cell in cells):
-                continue
-            if len(cells) != len(head):
-                self.faults.append(Fault(cells[0].place, f"expected {len(head)} values, found {len(cells)}"))
-                continue
             for name, number in columns.items():
                 if cells[number].text:
                     self._add(name, cells[0], cells[number])
 
-    def _rows(self, text: str, file: str) -> list[list[Scalar]]:
-        """The cells of every line, as far as the lines can be read."""
-        reader = csv.reader(text.splitlines(), strict=True)
-        rows = []
-        try:
-            for row in reader:
-                rows.append(_cells(row, file, reader.line_num))
-        except csv.Error as error:
-            self.faults.append(Fault(Place(file, reader.line_num, 1), f"the line is not CSV: {error}"))
-        return rows
-
     def _is_asset(self, name: Scalar) -> bool:
         if name.text in self.assets:
             return True
-        near = did_you_mean(name.text, self.assets) or f"; expected one of {', '.join(self.assets)}"
+        near = did_you_mean(name.text, self.assets) or f"; expected {' or '.join(self.assets)}, with levels by date"
         self.faults.append(Fault(name.place, f"'{name.text}' is no asset of the contract{near}"))
         return False
 
@@ -119,12 +104,3 @@ class _Reader:
             self.faults.append(Fault(day.place, f"a second level of '{asset}' on {known}"))
         self.levels[asset][known] = value
 
-
-def _cells(row: list[str], file: str, line: int) -> list[Scalar]:
-    """The cells of a line with their places (as far as cells are not quoted)."""
-    found, column = [], 1
-    for cell in row:
-        lead = len(cell) - len(cell.lstrip())
-        found.append(Scalar(cell.strip(), Place(file, line, column + lead)))
-        column += len(cell) + 1
-    return found

@@ -50,6 +50,11 @@ def show_price(result: PriceResult, page: Page) -> None:
     if result.parts:
         page.heading("parts")
         page.table(("part", scale.unit, "standard error", result.currency), amounts(result.parts, result, scale))
+    if result.owed:
+        page.heading("owed already (part of the value)")
+        page.table(("paid on", "leg", "fixed on", scale.unit, result.currency, "present value"), (
+            (each.date, each.leg, each.observed, scale.show(each.amount, max(scale.fewest, 4)), fixed(each.value, 2),
+             fixed(each.present_value, 2)) for each in result.owed), words=3)
     if result.conditions or result.ends:
         page.heading(PROBABILITIES)
         _probabilities(result, page)
@@ -71,6 +76,11 @@ def facts(result: PriceResult, scale: Scale) -> Iterator[tuple[str, str]]:
     yield "valued on", result.valuation or "time 0"
     yield "value", (f"{fixed(result.value, min(money, 2))} {result.currency} for {size}, standard error "
                     f"{fixed(result.value_standard_error, min(money, 2))}")
+    if result.accrued:
+        low, high = (scale.show(number, places) for number in (result.clean, result.accrued))
+        yield "clean value", f"{low}{scale.sign} and {high}{scale.sign} accrued; the value above is dirty"
+    if result.ended:
+        yield "ended on", result.ended
     yield "standard error", f"{scale.show(result.standard_error, places)}{scale.sign}"
     yield "95 % interval", f"{low} to {high}{scale.sign}"
     yield "paths", f"{result.paths:,} in {result.seconds:.2f} s; asked for: {result.planned.asked}"
@@ -142,7 +152,7 @@ def show_prices(table: PriceTable, page: Page) -> None:
     """Several contracts: one line each, then what is particular to some, then what holds for all."""
     if table.interrupted:
         page.line("interrupted: the estimates so far", style="bold")
-    page.table(("contract", "", "price", "± 95 %", "currency", "value"), map(_row, table.prices), words=2)
+    page.table(("contract", "unit", "price", "± 95 %", "currency", "value"), map(_row, table.prices))
     page.line("± is the half-width of the 95 % interval, sampling error only; legs, probabilities and checks: one "
               "contract at a time, or --json")
     if table.not_valued:

@@ -26,6 +26,7 @@ from mcx.report.results import (
     WatchLine,
 )
 from mcx.report.settled import Settled, right_sides
+from mcx.report.state import state_view
 from mcx.report.underlyings import underlyings
 from mcx.report.wording import Words, days, figure, joined, period
 from mcx.tape.steps import PLAIN
@@ -48,7 +49,7 @@ def readback(dated: DatedContract, market: Market | None, path: PathResult | Non
     words, settled = Words(dated), Settled(contract)
     market_map = MarketMap.of(market, dated) if market else None
     nodes, makeup = (market_map.nodes(), market_map.makeup()) if market_map else ((), PLAIN)
-    unrolled = unroll(dated, nodes=nodes, makeup=makeup)
+    unrolled = unroll(dated, nodes=nodes, makeup=makeup, given=path is not None)
     return Readback(
         contract=contract.title,
         payoff=contract.payoff.name,
@@ -63,6 +64,7 @@ def readback(dated: DatedContract, market: Market | None, path: PathResult | Non
         assumptions=(*dated.assumptions, *(underlyings(dated, market_map) if market_map else ())),
         market=tuple(_market(dated, market_map)) if market_map else (),
         path=path,
+        state=state_view(dated, unrolled.state, market_map) if market_map and dated.valuation else None,
     )
 
 
@@ -167,7 +169,11 @@ def _dates(dated: DatedContract, words: Words, settled: Settled) -> Iterator[Dat
     ends = [(watch.start, "the watch begins", watch) for watch in read]
     ends += [(watch.end, "the watch ends", watch) for watch in read]
     ends.sort(key=lambda item: item[0].time)
+    fixed = sorted(dated.levels_fixed, key=lambda item: item[1].time)
     for moment in dated.moments:
+        while fixed and fixed[0][1].time <= moment.day.time:
+            name, day = fixed.pop(0)
+            yield DateLine(str(day), 0, f"{name} observed", "", "")
         while ends and ends[0][0].time < moment.day.time:
             yield _watch_line(*ends.pop(0))
         for update in moment.updates:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from mcx.report.results import Library, MarketDate, PathResult, Readback, Replay
+from mcx.report.results import CalendarView, Library, MarketDate, PathResult, Readback, Replay, StateView
 from mcx.report.terminal import Page, fixed
 
 ASSETS = 2  # beside one another in the market table
@@ -36,6 +36,8 @@ def show_readback(result: Readback, page: Page) -> None:
         page.items(result.assumptions)
     if result.market:
         _market(result.market, page)
+    if result.state:
+        _state(result.state, page)
     if result.path:
         _path(result, result.path, page)
 
@@ -53,6 +55,45 @@ def _market(dates: tuple[MarketDate, ...], page: Page) -> None:
             [line.date, *(cell for asset in line.assets[first:first + ASSETS]
                           for cell in (fixed(asset.forward, 4), fixed(100.0 * asset.vol, 4, "%")))]
             for line in observed))
+
+
+def _state(state: StateView, page: Page) -> None:
+    """What has become of the contract; nothing where nothing has happened yet but the distances."""
+    page.heading(f"state on {state.valuation}")
+    if state.ended:
+        page.line(f"ended on {state.ended}", style="bold")
+    if state.past:
+        page.table(("date", "what", "happened"), ((each.date, each.what, each.happened) for each in state.past), words=3)
+    if state.fixings:
+        page.heading("fixings used, as they count")
+        page.table(("date", "asset", "level"), ((each.date, each.asset, f"{each.level:.10g}") for each in state.fixings),
+                   words=2)
+    if state.running:
+        page.heading("running values so far")
+        page.named((each.name, each.text) for each in state.running)
+    if state.paid or state.owed:
+        page.heading("paid and owed")
+        page.table(("date", "leg", "", "amount", "in currency"), [
+            *((each.date, each.leg, "paid", f"{each.amount:.10g}", fixed(each.value, 2)) for each in state.paid),
+            *((each.date, each.leg, "owed", f"{each.amount:.10g}", fixed(each.value, 2)) for each in state.owed),
+        ], words=3)
+    page.items(state.to_deliver)
+    if state.accrued:
+        page.line(f"  accrued: {state.accrued:.10g}")
+    if state.next:
+        page.heading("next")
+        page.named((each.name, each.text) for each in state.next)
+    if state.distances:
+        page.heading("distance of today's levels to those that matter")
+        page.table(("what", "next on", "asset", "level", "today", "distance"), (
+            (each.what, each.date, each.asset, f"{each.level:.6g}", f"{each.today:.6g}",
+             fixed(100.0 * each.distance, 2, "%")) for each in state.distances), words=3)
+
+
+def show_calendar(result: CalendarView, page: Page) -> None:
+    """Everything to come, in order of time."""
+    page.table(("date", "contract", "what", "of"), (
+        (each.date, each.contract, each.kind, each.of) for each in result.lines), words=4)
 
 
 def _path(result: Readback, path: PathResult, page: Page) -> None:

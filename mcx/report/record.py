@@ -27,10 +27,12 @@ CHECKSUM = "sha256"
 REQUEST = {  # what a result repeats of its request, by verb
     "price": ("contract", "paths", "seed", "reduction"),
     "greeks": ("contract", "paths", "seed", "reduction", "estimator", "bump", "assets", "spot_moves", "vol_moves"),
+    "verify": ("contract", "paths", "seed", "reduction", "solve", "target"),
 }
 CLOSE = 1e-12  # relative, on another type of processor
 # How long it took, how the number of paths was found, and what is worded: sentences change with versions.
-NOT_COMPARED = ("seconds", "planned", "choices", "warnings", "assumptions", "limits", "cautions", "calendar_version")
+NOT_COMPARED = ("seconds", "planned", "verdict", "text", "about", "note", "choices", "warnings", "assumptions", "limits",
+                "cautions", "calendar_version")
 
 
 def environment() -> dict[str, str]:
@@ -186,9 +188,11 @@ def differences(old: object, new: object, name: str = "") -> Iterator[tuple[str,
 def _label(entry: object, number: int) -> str:
     """How a list's entry is called: by its name or date where it has one."""
     if isinstance(entry, dict):
+        if {"input", "asset"} <= entry.keys():
+            return f"[{entry['input']} {entry['asset']}]"
         if {"name", "asset", "tenor"} <= entry.keys():
             return f"[{' '.join(filter(None, (entry['name'], entry['asset'], entry['tenor'])))}]"
-        for key in ("contract", "name", "date", "asset"):
+        for key in ("contract", "name", "date", "reading", "step", "asset"):
             if entry.get(key):
                 return f"[{entry[key]}]"
     return f"[{number}]"

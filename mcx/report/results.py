@@ -73,6 +73,19 @@ class Amount(Result):
 
 
 @dataclass(frozen=True, slots=True)
+class Owed(Result):
+    """An amount that is fixed and not yet paid, in the unit of the price and in currency; `present_value` is part of
+    the price's value."""
+
+    date: str
+    leg: str
+    observed: str
+    amount: float
+    value: float
+    present_value: float
+
+
+@dataclass(frozen=True, slots=True)
 class Likelihood(Result):
     """How often something happened: on `date` (a date, a year or a span of years), or ever where it is ''."""
 
@@ -143,7 +156,9 @@ class PriceResult(Result):
 
     `notional` or `units` is None. `valuation` is None for textbook markets. `ends` holds how often the contract ended
     early on each date, `reached_maturity` how often it did not, and `expected_life` the years to the payment that ends
-    it. `warnings` are about this run, `assumptions` what was taken as given, `limits` what the model leaves out,
+    it. `owed` are amounts that fixings have settled and that are not yet paid; they are part of the price, which is dirty:
+    `accrued` is the interest of certain coupons in their running period, and `clean` the price less that. `ended` is the
+    date on which the contract has ended already, '' where it lives. `warnings` are about this run, `assumptions` what was taken as given, `limits` what the model leaves out,
     `cautions` how the number may be used.
     """
 
@@ -173,6 +188,10 @@ class PriceResult(Result):
     reached_maturity: Likelihood
     expected_life: float
     expected_life_standard_error: float
+    owed: tuple[Owed, ...]
+    accrued: float
+    clean: float
+    ended: str
     checks: Checks
     warnings: tuple[str, ...]
     assumptions: tuple[str, ...]
@@ -296,8 +315,75 @@ class PathResult(Result):
 
 
 @dataclass(frozen=True, slots=True)
+class Fixed(Result):
+    """A level of the past as it counts in the contract: converted and adjusted."""
+
+    date: str
+    asset: str
+    level: float
+
+
+@dataclass(frozen=True, slots=True)
+class PastLine(Result):
+    """An event of the past, and whether it happened: 'yes', 'no', or "by today's level"."""
+
+    date: str
+    what: str
+    happened: str
+
+
+@dataclass(frozen=True, slots=True)
+class Distance(Result):
+    """How far today's level of an asset is from one at which a comparison turns: `level` and `today` as they count,
+    `distance` as a part of today's level (-0.25: it must fall by a quarter). `date` is the next on which it is read."""
+
+    what: str
+    date: str
+    asset: str
+    level: float
+    today: float
+    distance: float
+
+
+@dataclass(frozen=True, slots=True)
+class StateView(Result):
+    """What has become of a contract by the valuation date. `accrued` is in the unit of the price; `running` are values
+    so far; `next` what comes next; `distances` of today's levels to those that matter."""
+
+    valuation: str
+    fixings: tuple[Fixed, ...]
+    past: tuple[PastLine, ...]
+    paid: tuple[Payment, ...]
+    owed: tuple[Owed, ...]
+    to_deliver: tuple[str, ...]
+    accrued: float
+    running: tuple[Sentence, ...]
+    ended: str
+    next: tuple[Sentence, ...]
+    distances: tuple[Distance, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class CalendarLine(Result):
+    """One thing to come: `kind` is 'fixing', 'decision' or 'payment'; `of` the assets, the event or the leg."""
+
+    date: str
+    contract: str
+    kind: str
+    of: str
+
+
+@dataclass(frozen=True, slots=True)
+class CalendarView(Result):
+    """What comes next of several contracts, in order of time: `mcx readback --calendar`."""
+
+    lines: tuple[CalendarLine, ...]
+
+
+@dataclass(frozen=True, slots=True)
 class Readback(Result):
-    """What a contract says: `mcx readback`. `market` is empty without a market, `path` None without given levels."""
+    """What a contract says: `mcx readback`. `market` is empty without a market, `path` None without given
+    levels, `state` None without a dated market."""
 
     MAIN: ClassVar[str] = "dates"
     contract: str
@@ -313,6 +399,7 @@ class Readback(Result):
     assumptions: tuple[str, ...]
     market: tuple[MarketDate, ...]
     path: PathResult | None
+    state: StateView | None
 
 
 @dataclass(frozen=True, slots=True)

@@ -80,12 +80,13 @@ def _formulas(settled: Settled) -> Iterator[Formula]:
 
 
 def _base(settled: Settled) -> str:
-    """The term of levels that spots are divided by, if it is one."""
+    """The term of stated levels that spots are divided by, if it is one."""
     terms = {term.name: term for term in settled.contract.payoff.terms}
     ratios = [part for formula in _formulas(settled) for part in walk(formula)
               if isinstance(part, Binary) and part.symbol == "/" and isinstance(part.left, Name)
               and part.left.name == "spot" and isinstance(part.right, Name)]
-    found = {part.right.name for part in ratios if part.right.name in terms and terms[part.right.name].type == "level"}
+    found = {part.right.name for part in ratios if part.right.name in terms and terms[part.right.name].type == "level"
+             and isinstance(settled.contract.terms.get(part.right.name), Figures)}
     return found.pop() if len(found) == 1 else ""
 
 

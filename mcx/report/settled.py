@@ -24,7 +24,7 @@ from mcx.checked.formula import (
     walk,
 )
 from mcx.checked.kinds import Kind
-from mcx.checked.payoff import Action, Assign, Event, Pay
+from mcx.checked.payoff import Action, Assign, Deliver, Event, Pay
 from mcx.faults import Place
 
 SAME_FOR_ONE = ("worst", "best", "mean", "any", "all", "ranked")
@@ -151,6 +151,8 @@ class Settled:
 def right_sides(action: Action) -> tuple[Formula, ...]:
     """The formulas of an action."""
     match action:
+        case Deliver(amount=amount, which=which):
+            return (amount,) if which is None else (amount, which)
         case Pay():
             return (action.amount,)
         case Assign():

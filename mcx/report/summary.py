@@ -19,6 +19,7 @@ from mcx.report.results import (
     PriceResult,
     Stage,
 )
+from mcx.report.state import accrued, owed, standing
 
 NO_REDUCTION = "none"
 
@@ -58,9 +59,13 @@ def price_result(ready: Ready, market: Market, valuation: Valuation) -> PriceRes
         reached_maturity=_not_ended(ends, price.paths),
         expected_life=life.value,
         expected_life_standard_error=life.standard_error,
+        owed=owed(ready),
+        accrued=accrued(dated, ready.unrolled.state),
+        clean=price.value - accrued(dated, ready.unrolled.state),
+        ended=str(ready.unrolled.state.ended or ""),
         checks=Checks(martingale, tuple(Stage(e.paths, e.value, e.standard_error) for e in valuation.stages)),
         warnings=tuple(warnings(valuation, ready.unrolled.tape, martingale, met)),
-        assumptions=tuple(dict.fromkeys(assumptions(dated, market, ready.market))),
+        assumptions=tuple(dict.fromkeys((*standing(ready), *assumptions(dated, market, ready.market)))),
         limits=tuple(limits(dated)),
         cautions=tuple(cautions(dated, bool(conditions or ends))),
         calendar_version=dated.calendar_version,

@@ -50,7 +50,7 @@ class Page:
     def named(self, pairs: Iterable[tuple[str, str]]) -> None:
         """Names with what is said of them."""
         grid = Table.grid(padding=(0, 2))
-        grid.add_column(max_width=24, overflow="fold")
+        grid.add_column(max_width=28, overflow="fold")
         grid.add_column()
         for name, text in pairs:
             grid.add_row(Text(name), Text(text))

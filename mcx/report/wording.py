@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
 
-from mcx.checked.contract import DayList, DayRef, DayRule, Figures, Period, Stretch, Word
+from mcx.checked.contract import DayList, DayRef, DayRule, Figures, LevelFixing, Period, Stretch, Word
 from mcx.checked.formula import (
     Binary,
     Call,
@@ -87,6 +87,8 @@ class Words:
                 return {"true": "yes", "false": "no"}.get(text, text) if term.type == "flag" else text
             case Figures():
                 return self.figures(term, value)
+            case LevelFixing(how=how):
+                return f"the level on {days(listed)}" if how == "fixing" else f"the {how} of the levels on {days(listed)}"
             case DayRef(term=named) if named:
                 part = f".{value.part}" if value.part else ""
                 return f"{days(listed)} ({named}{part})"

@@ -12,7 +12,7 @@ from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from typing import TypeAlias
 
-from mcx.checked.contract import Contract, Figures, Word
+from mcx.checked.contract import Contract, Figures, LevelFixing, Word
 from mcx.checked.formula import (
     Binary,
     Call,
@@ -66,10 +66,11 @@ DATE_NAMES = ("nth", "n_dates", "years", "period")
 
 
 class Formulas:
-    """Reads the formulas of one contract into one tape."""
+    """Reads the formulas of one contract into one tape; `observed` gives the values of a level term that is observed
+    rather than stated."""
 
-    def __init__(self, contract: Contract, builder: Builder):
-        self.contract = contract
+    def __init__(self, contract: Contract, builder: Builder, observed: Callable[[str, Place, Occasion | None], Values]):
+        self.contract, self.observed = contract, observed
         self.builder = builder
         self.lets = {let.name: let.formula for let in contract.payoff.lets}
         self.running = frozenset(running.name for running in contract.payoff.running)
@@ -165,6 +166,8 @@ class Formulas:
             raise Unreadable(place, f"'{name}' is not given in this contract")
         if isinstance(stated, Word):
             return (self.builder.constant(stated.text == "true"),)
+        if isinstance(stated, LevelFixing):
+            return self.observed(name, place, occasion)
         if not isinstance(stated, Figures):
             raise Unreadable(place, f"'{name}' is a date, not a number")
         index = -1

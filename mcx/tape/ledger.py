@@ -6,12 +6,27 @@ from dataclasses import dataclass, field
 
 from mcx.checked.payoff import Pay, Payoff
 from mcx.dates.dated_contract import Day
+from mcx.faults import Place
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
 from mcx.tape.program import Output
 
 MOST_DAYS = 64  # dates listed one by one; more ends are grouped by year, more conditions are not listed by date
 UNSORTED = "unsorted"
+
+
+@dataclass(frozen=True, slots=True)
+class Payment:
+    """One amount that may be owed: `amount`, not discounted, is paid on `due` where `flag`; both are values of the
+    tape. `decided` is the day of the event that stands at `event` in the definition."""
+
+    leg: str
+    part: str
+    event: Place
+    decided: Day
+    due: Day
+    flag: int
+    amount: int
 
 
 @dataclass(slots=True)
@@ -25,6 +40,8 @@ class Ledger:
     ends: dict[Day, int] = field(default_factory=dict)
     lives: list[tuple[int, float]] = field(default_factory=list)  # flag of the ending, time of its payment
     last_payment: float = 0.0
+    payments: list[Payment] = field(default_factory=list)
+    owed: int | None = None  # what is fixed already and not yet paid
 
     @staticmethod
     def opened(builder: Builder, payoff: Payoff) -> Ledger:
@@ -38,8 +55,12 @@ class Ledger:
         ledger.conditions = {event.name: {} for event in payoff.events if event.name}
         return ledger
 
-    def pay(self, pay: Pay, present_value: int, due: Day) -> None:
-        add = self.builder.emit
+    def pay(self, pay: Pay, present_value: int, payment: Payment, settled: bool = False) -> None:
+        """Enter a payment; `settled`: it is fixed already."""
+        add, due = self.builder.emit, payment.due
+        self.payments.append(payment)
+        if settled:
+            self.owed = present_value if self.owed is None else add(Op.ADD, self.owed, present_value, place=pay.place)
         self.legs[pay.leg] = add(Op.ADD, self.legs[pay.leg], present_value, place=pay.place)
         if self.parts:
             part = pay.part or UNSORTED
@@ -52,7 +73,7 @@ class Ledger:
     def ended(self, day: Day, flag: int, payment: float) -> None:
         """The contract ended on `day` where `flag`; `payment` is when the amount due for it is paid."""
         self._join(self.ends, day, flag)
-        self.lives.append((flag, payment))
+        self.lives.append((flag, max(payment, 0.0)))
 
     def _join(self, flags: dict[Day, int], day: Day, flag: int) -> None:
         flags[day] = self.builder.emit(Op.OR, flags[day], flag) if day in flags else flag
@@ -63,6 +84,7 @@ class Ledger:
         made = [Output.of("price", fold(Op.ADD, self.legs.values()) if self.legs else nothing)]
         made += [Output.of("leg", value, name) for name, value in self.legs.items()]
         made += [Output.of("part", value, name) for name, value in self.parts.items()]
+        made += [Output.of("owed", self.owed)] if self.owed is not None else []
         for name, flags in self.conditions.items():
             ever = fold(Op.OR, flags.values()) if flags else nothing
             made.append(Output.of("condition", ever, name, flag=True))

@@ -13,7 +13,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from mcx.tape.builder import COMMUTATIVE
-from mcx.tape.ops import Op
+from mcx.tape.ops import OPS, Op
 from mcx.tape.program import ALONE, Program, Tape
 from mcx.tape.rules import evaluate
 
@@ -103,12 +103,17 @@ def lower(tape: Tape, leaf_values: Sequence[float] | np.ndarray) -> Program:
     )
 
 
-def uniform_values(tape: Tape, leaf_values: Sequence[float] | np.ndarray) -> list[float | None]:
-    """For each value of the tape the number that it is on every path, or None where it depends on the draws."""
+def uniform_values(
+    tape: Tape, leaf_values: Sequence[float] | np.ndarray, flags: Sequence[float | None] = ()
+) -> list[float | None]:
+    """For each value of the tape the number that it is on every path, or None where it depends on the draws. Flags that
+    are such a number are taken from `flags` where that is given: values found with other leaves."""
     leaves = dict(zip(tape.leaves, leaf_values, strict=True))
     known: list[float | None] = []
-    for step in tape.instructions:
-        if step.op is Op.CONSTANT:
+    for number, step in enumerate(tape.instructions):
+        if flags and OPS[step.op].flag:
+            known.append(flags[number])
+        elif step.op is Op.CONSTANT:
             known.append(step.payload)
         elif step.op is Op.LEAF:
             known.append(float(leaves[step.payload]))

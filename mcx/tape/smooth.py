@@ -1,14 +1,15 @@
 """Which conditions make a value jump: decided by the tape, for each payment by itself.
 
 A derivative taken path by path is the derivative of the price only where the value has no jumps (P. Glasserman, "Monte
-Carlo Methods in Financial Engineering", 2003, section 7.2). Sums, products, extremes and roots do not jump; a
-comparison does, and so does a division by what may be zero. A comparison is harmless for a value that is the same on
-both sides where the compared numbers are equal: a call's `spot - strike if spot > strike else 0`. That is shown by
-algebra, on the polynomials of `polynomials.py`; what is not shown counts as a jump.
+Carlo Methods in Financial Engineering", 2003, section 7.2). Sums, products and extremes do not jump; a
+comparison does, and so does a division by what may be zero; a root or log of what may be zero has no bounded slope
+there, so that a derivative path by path has no finite variance or no mean, and counts alike. A comparison is harmless
+for a value that is the same on both sides where the compared numbers are equal: a call's `spot - strike if spot >
+strike else 0`. That is shown by algebra, on the polynomials of `polynomials.py`; what is not shown counts as a jump.
 
 For each comparison the change of every value when it turns is followed through the tape: a polynomial, or UNKNOWN. The
 leaves have their numbers from the market, moved a little so that nothing is equal by accident; the contract's terms
-stay.
+stay, and so do conditions that are decided today.
 """
 
 from __future__ import annotations
@@ -29,12 +30,13 @@ COMPARISONS = frozenset({Op.LT, Op.LE, Op.EQ, Op.NE})
 KEEPS_POSITIVE = frozenset({Op.ADD, Op.MUL, Op.DIV, Op.MIN, Op.POW, Op.SQRT})
 UNKNOWN = None  # a change that is not followed any further
 SETTINGS, MOVE, SEED = 2, 1e-3, 20240229
-CONDITION, DIVISION = "condition", "division"
+CONDITION, DIVISION, ROOT = "condition", "division", "root"
 
 
 @dataclass(frozen=True, slots=True, order=True)
 class Jump:
-    """Why a value jumps: 'condition' or 'division' (by what may be zero; also a power of it), and its place, if known.
+    """Why a value jumps: 'condition', 'division' (by what may be zero; also a power of it) or 'root' (also a log, of
+    what may be zero: no jump, but no bounded slope either), and its place, if known.
 
     `value` is the first value of the tape that does so: the same line makes one on each date.
     """
@@ -66,11 +68,12 @@ def jumps(tape: Tape, leaf_values: Sequence[float] | np.ndarray, values: Iterabl
     values = tuple(values)
     found: list[set[Jump]] = [set() for _ in values]
     draws = np.random.default_rng(SEED)
+    flags = uniform_values(tape, leaf_values)  # those decided today hold for the analysis too
     fixed = np.array([leaf.kind is LeafKind.TERM for leaf in tape.leaves], dtype=bool)
     for _ in range(SETTINGS):
         up, by = draws.uniform(-MOVE, MOVE, (2, len(fixed)))
         moved = np.where(fixed, leaf_values, np.asarray(leaf_values) * (1.0 + up) + MOVE * by)
-        for jump, hit in _Walk(tape, moved, values).jumps():
+        for jump, hit in _Walk(tape, moved, values, flags).jumps():
             for number in range(len(values)):
                 if hit >> number & 1:
                     found[number].add(jump)
@@ -87,9 +90,9 @@ def _one_for_each_line(found: Iterable[Jump]) -> tuple[Jump, ...]:
 class _Walk:
     """The tape with one set of leaf values. Sets of the asked values are written as bits of an integer."""
 
-    def __init__(self, tape: Tape, leaf_values: np.ndarray, values: Sequence[int]):
+    def __init__(self, tape: Tape, leaf_values: np.ndarray, values: Sequence[int], flags: Sequence[float | None]):
         self.steps = tape.instructions
-        self.known = uniform_values(tape, leaf_values)
+        self.known = uniform_values(tape, leaf_values, flags)
         self.forms = Polynomials(self.steps, self.known)
         self.asked: dict[int, int] = {}
         for number, value in enumerate(values):
@@ -104,6 +107,7 @@ class _Walk:
     def jumps(self) -> Iterable[tuple[Jump, int]]:
         """What jumps, with the asked values (bits) that it makes jump."""
         stepwise, positive = self._stepwise(), self._positive()
+        square = self._square(positive)
         for number, step in enumerate(self.steps):
             if self.known[number] is not None or not self.reached[number]:
                 continue
@@ -113,8 +117,8 @@ class _Walk:
                     boundary = total(self.forms[x], self.forms[y], -1.0)
                     if hit := self._follow(number, {(): 1.0}, boundary):
                         yield Jump(number, CONDITION, step.place), hit
-            elif self._may_divide_by_zero(step.op, step.operands, positive):
-                yield Jump(number, DIVISION, step.place), self.reached[number]
+            elif kind := self._without_bound(step.op, step.operands, positive, square):
+                yield Jump(number, kind, step.place), self.reached[number]
 
     def _users(self) -> list[list[int]]:
         """Who reads each value, of those that the asked values depend on and that differ from path to path."""
@@ -268,7 +272,42 @@ class _Walk:
                     found.append(step.op in KEEPS_POSITIVE and (signs[0] if step.op is Op.POW else all(signs)))
         return found
 
-    def _may_divide_by_zero(self, op: Op, operands: tuple[int, ...], positive: Sequence[bool]) -> bool:
-        if op is Op.DIV:
-            return self.known[operands[1]] is None and not positive[operands[1]]
-        return op is Op.POW and not positive[operands[0]] and not positive[operands[1]]
+    def _square(self, positive: Sequence[bool]) -> list[bool]:
+        """Which values have a root with a bounded slope: squares, what is above zero, and sums of such."""
+        found: list[bool] = []
+        for number, step in enumerate(self.steps):
+            parts = [found[k] for k in step.operands]
+            known = self.known[number]
+            match step.op:
+                case _ if known is not None:
+                    found.append(known >= 0.0)
+                case Op.MUL:
+                    found.append(step.operands[0] == step.operands[1] or all(parts))
+                case Op.POW:
+                    power = self.known[step.operands[1]]
+                    found.append(positive[number] or (power is not None and power >= 2.0))
+                case Op.DIV:
+                    found.append(parts[0] and positive[step.operands[1]])
+                case Op.SELECT:
+                    found.append(parts[1] and parts[2])
+                case _:
+                    found.append(positive[number] or step.op in (Op.ADD, Op.MIN, Op.MAX) and all(parts))
+        return found
+
+    def _without_bound(
+        self, op: Op, operands: tuple[int, ...], positive: Sequence[bool], square: Sequence[bool]
+    ) -> str:
+        """Why an operation has no bounded slope: the kind of jump, or ''."""
+        x, power = operands[0] if operands else 0, self.known[operands[1]] if op is Op.POW else None
+        match op:
+            case Op.DIV if self.known[operands[1]] is None and not positive[operands[1]]:
+                return DIVISION
+            case Op.POW if not positive[x] and not positive[operands[1]]:
+                return DIVISION
+            case Op.POW if not positive[x] and not (power and (power >= 1.0 or power >= 0.5 and square[x])):
+                return ROOT
+            case Op.SQRT if not square[x]:
+                return ROOT
+            case Op.LOG if not positive[x]:
+                return ROOT
+        return ""

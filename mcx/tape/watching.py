@@ -121,6 +121,9 @@ class _Shapes:
         """The numbers of a part that does not read levels."""
         values = self.formulas.read(formula, Scene(spot=_not_fixed, running=_not_fixed))
         numbers = [self.formulas.fixed(value) for value in values]
+        if None in numbers:
+            raise Unreadable(formula.place, "a continuous watch compares an asset's level with fixed numbers; this one "
+                                            "is still to be fixed")
         return tuple(Shape(number, number) for number in numbers)
 
     def _binary(self, formula: Binary, symbol: str) -> tuple[Shape, ...]:

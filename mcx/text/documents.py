@@ -10,6 +10,7 @@ from pathlib import Path
 from mcx.faults import Fault, Place, did_you_mean
 from mcx.text.located import Document, Mapping
 from mcx.text.scalars import expected, shown
+from mcx.text.source import decoded
 from mcx.text.yaml12 import SIZE_LIMIT, read_yaml, too_large
 
 TELLING_KEYS = ("contract", "market", "quote")
@@ -32,7 +33,13 @@ def read_documents(files: Iterable[str | Path]) -> tuple[list[Document], list[Fa
 
 
 def parse_documents(data: bytes, file: str) -> tuple[list[Document], list[Fault]]:
-    """The documents in a file's bytes; `file` is the name that its places carry."""
+    """The documents in a file's bytes; `file` is the name that its places carry. A CSV file is one document, a table of
+    fixings."""
+    if file.lower().endswith(".csv"):
+        text = decoded(data, file)
+        if isinstance(text, Fault):
+            return [], [text]
+        return [Document("fixings", Mapping((), Place(file, 1, 1)), file, text)], []
     nodes, faults = read_yaml(data, file)
     text = data.decode("utf-8-sig") if nodes else ""
     documents = []

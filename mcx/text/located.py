@@ -87,7 +87,7 @@ Node: TypeAlias = Scalar | Sequence | Mapping
 class Document:
     """One YAML document: its kind, told by its keys, its top mapping, and the file's text for the record."""
 
-    kind: str  # payoff, contract, market or quote
+    kind: str  # payoff, contract, market or quote; fixings for a CSV file
     body: Mapping
     file: str
     text: str

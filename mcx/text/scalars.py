@@ -97,7 +97,8 @@ def _meant(text: str) -> str:
     meant = []
     if SPLIT_THOUSANDS.fullmatch(text):
         meant.append(re.sub("[_,' ]", "", text))
-    if comma := DECIMAL_COMMA.fullmatch(text):
+    comma = DECIMAL_COMMA.fullmatch(text)
+    if comma and not (meant and not comma[3] and comma[2].endswith("0")):  # nobody writes 250 as '250,000'
         whole = comma[1] if comma[1][-1:].isdigit() else f"{comma[1]}0"
         meant.append(f"{whole}.{comma[2]}{comma[3]}")
     if points := BASIS_POINTS.fullmatch(text):

@@ -10,8 +10,10 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from mcx.checked.library import Definitions, shipped_names, shipped_text
+from mcx.checked.library import Definitions, shipped, shipped_names, shipped_text
 from mcx.checked.load import NO_FUNDING, Request, checked_request, load, request
+from mcx.checked.payoff import MULTIPLES
+from mcx.checked.read_payoff import read_payoff
 from mcx.dates.dating import date_contract
 from mcx.faults import InputError
 from mcx.text.documents import parse_documents
@@ -145,9 +147,11 @@ SLIPS = [
     (MARKET, "funding: {EUR: 0 bp}", "source: screen",
      ["b.yaml:1:9: no funding spread for 'EUR', the currency of the note 'Worst-of put'; write 'funding: "
       "{EUR: 0 bp}' to value it without the issuer's spread"]),
-    (MARKET, ", quarry/orchard: 55%", "", ["b.yaml:8:14: no correlation for 'quarry/orchard'"]),
+    (MARKET, ", quarry/orchard: 55%", "",
+     ["b.yaml:8:14: no correlation for 'quarry/orchard'; write 'quarry/orchard: NUMBER%' under 'correlation'"]),
     (MARKET, "correlation: {harbour/quarry: 60%, harbour/orchard: 65%, quarry/orchard: 55%}\n", "",
-     ["b.yaml:1:9: no correlation for 'harbour/quarry', 'harbour/orchard' and 'quarry/orchard'"]),
+     ["b.yaml:1:9: no correlation for 'harbour/quarry', 'harbour/orchard' and 'quarry/orchard'; write 'correlation: "
+      "{harbour/quarry: NUMBER%, harbour/orchard: NUMBER%, quarry/orchard: NUMBER%}'"]),
 ]
 
 
@@ -212,7 +216,9 @@ def test_currency_of_the_asset():
                                           "rate of exchange; write 'fx: {EUR per USD: {spot: ..., vol: ...}}'"]
     market = market.replace("correlation:", "fx: {USD per EUR: {spot: 1.1, vol: 8%}}\ncorrelation:")
     assert made(composite, market)[1] == ["b.yaml:9:14: no correlation for 'harbour/USD per EUR', 'quarry/USD per EUR' "
-                                          "and 'orchard/USD per EUR'"]
+                                          "and 'orchard/USD per EUR'; write 'harbour/USD per EUR: NUMBER%', "
+                                          "'quarry/USD per EUR: NUMBER%' and 'orchard/USD per EUR: NUMBER%' under "
+                                          "'correlation'"]
     assert made(CONTRACT.replace("currency: EUR", "currency: EUR\nconversion: {harbour: quanto}"), MARKET)[1] == [
         "a.yaml:3:14: 'harbour' is quoted in EUR, the contract's currency: there is nothing to convert"]
 
@@ -297,6 +303,27 @@ def test_funding_of_options_is_an_assumption():
     assert asked.contracts[0].assumptions == (NO_FUNDING,)
     asked, _ = made(OPTION, TEXTBOOK.replace("rates", "funding: {EUR: 10 bp}\nrates"))
     assert asked.contracts[0].assumptions == ()
+
+
+def test_funding_of_a_note_is_stated_whatever_its_size_is_called():
+    """A payment of part 'bond' is an issuer's promise, also of a definition that leaves it open what amounts are."""
+    own = ("payoff: own\nterms: {expiry: {type: date}}\nevents:\n  - {at: expiry, pay: 1, part: bond}\n"
+           "  - {at: expiry, pay: spot, part: option}\n")
+    note = OPTION.replace("payoff: european", "payoff: own").replace("side: call, strike: 100, ", "")
+    said = ("b.yaml:1:9: no funding spread for 'EUR', the currency of the note 'Call'; write 'funding: {EUR: 0 bp}' to "
+            "value it without the issuer's spread")
+    assert made(note, TEXTBOOK, own)[1] == [said]
+    funded = TEXTBOOK.replace("rates", "funding: {EUR: 0 bp}\nrates")
+    assert made(note, funded, own)[1] == []
+    assert made(note, TEXTBOOK, own.replace("bond", "option"))[1] == []
+
+
+def test_shipped_notes_take_a_notional():
+    """Every shipped definition with a bond in it says that its amounts are multiples of the notional."""
+    for name in shipped_names():
+        payoff, _ = read_payoff(shipped(name))
+        if any(pay.part == "bond" for pay in payoff.payments()):
+            assert payoff.pays == MULTIPLES, name
 
 
 MOST_WORDS = ["", "-1", "0", "70", "nan", "1e999", "[]", "{}", "[1, 2]", "{a: 1}", "2026-02-30", "9999-12-31",

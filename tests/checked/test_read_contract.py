@@ -179,6 +179,8 @@ SLIPS = [
     ("[harbour, lantern]", "[]", "4:9: expected one asset or more, found a list; the list is empty"),
     ("[harbour, lantern]", "[harbour, lan/tern]",
      "4:19: expected the name of an asset, of letters, digits and . _ - &, found 'lan/tern'"),
+    ("[harbour, lantern]", "[harbour lantern]",
+     "4:10: expected the name of an asset, of letters, digits and . _ - &, found 'harbour lantern'"),
     ("start: 2026-11-16", "start: 16.11.2026",
      "5:8: expected a date such as '2026-11-16', found '16.11.2026'; write '2026-11-16'"),
     ("start: 2026-11-16\n", "", "1:1: 'start' is missing in the contract"),
@@ -200,7 +202,7 @@ SLIPS = [
     ("holidays: ECB, ", "", "8:11: 'holidays' is missing in the calendar"),
     ("payoff: sampler", "payoff: sampller", "9:9: there is no payoff 'sampller'; did you mean 'sampler'?"),
     ("day_count: 30/360", "day_count: 30/360\nhappened: {hit: true}",
-     "7:1: 'happened' is a key of a later version and is refused rather than ignored"),
+     "7:17: expected what happened by date, as 'hit: {2027-03-04: true}', found 'true'"),
     # terms by name
     ("  side: call\n", "", "11:3: 'side' is missing in the terms of 'sampler'"),
     ("  side: call", "  syde: call",

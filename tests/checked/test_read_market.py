@@ -165,7 +165,8 @@ SLIPS = [
     ("correlation:", "corelation:",
      "10:1: 'corelation' is not a key of the market; did you mean 'correlation'?"),
     ("harbour/lantern", "harbour/latern",
-     "10:15: 'latern' is no asset of the market; did you mean 'lantern'?"),
+     "10:15: 'latern' is no asset of the market; did you mean 'harbour/lantern'?"),
+    ("harbour/lantern", "harbour/harbor", "10:15: 'harbor' is no asset of the market"),
     ("harbour/lantern", "harbour", "10:15: expected a pair of assets, as 'harbour/lantern', found 'harbour'"),
     ("harbour/lantern", "harbour/harbour", "10:15: expected two different assets, found 'harbour/harbour'"),
     ("65%}", "65%, lantern/harbour: 65%}",
@@ -177,8 +178,8 @@ SLIPS = [
     ("4180.2, currency: EUR", "4180.2", "8:12: 'currency' is missing in the asset 'harbour'"),
     ("{vol: 1.5%", "{vols: 1.5%", "11:15: 'vols' is not a key of the uncertainty; did you mean 'vol'?"),
     # later versions
-    ("source: closing prices", "fixings: {}",
-     "2:1: 'fixings' is a key of a later version and is refused rather than ignored"),
+    ("source: closing prices", "borrow: {}",
+     "2:1: 'borrow' is a key of a later version and is refused rather than ignored"),
     # what the level gives up
     ("yield: 2.4%, ", "dividends: [], ", "8:53: expected dividends by ex date, as '[{ex: 2027-05-03, cash: 4.0}, {ex: "
                                          "2028-05-02, share: 1.5%}]', found a list; there is none; write 'yield: 0%'"),

@@ -281,7 +281,7 @@ def test_of_knows_the_contracts_assets():
         ("    end:\n", "    end:\n    pay: 1\n",
          "49:5: 'pay' is a second action beside 'end'; begin it on a line of its own, under 'then' or in its own event"),
         ("    end:\n", "    name: nothing\n",
-         "47:5: nothing happens at this event: expected 'pay', 'set', 'end', or 'if' and 'then'"),
+         "47:5: nothing happens at this event: expected 'pay', 'deliver', 'set', 'end', or 'if' and 'then'"),
         ("given(rebate)", "given(coupon)",
          "46:31: 'given' asks about an optional term, and 'coupon' is not one; expected 'rebate'"),
     ],
@@ -299,7 +299,7 @@ def test_if_then_and_bare_actions_do_not_mix():
     assert read(small(events="  - at: expiry\n    then:\n      - pay: 1\n"))[1] == [
         "6:5: 'then' needs an 'if' in the same event"]
     assert read(small(events="  - at: expiry\n    set: {a: 1}\n    as: leg\n"))[1] == [
-        "6:11: there is no running value 'a'", "7:5: 'as' goes with 'pay' only"]
+        "6:11: there is no running value 'a'", "7:5: 'as' goes with 'pay' and 'deliver' only"]
 
 
 def test_names_that_go_round():

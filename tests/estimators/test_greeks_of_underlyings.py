@@ -110,3 +110,28 @@ def test_a_jump_after_the_last_dividend_has_its_rho(tmp_path: Path, size: str):
     density = exp(-d2 * d2 / 2) / sqrt(2 * 3.141592653589793)
     by_rate = density / deviation * (time + 8 * 0.75 * exp(-0.03) / left) - time * ndtr(d2)
     near(found["rho", "EUR"], 1e-4 * 100 * exp(-0.04 * time) * by_rate)
+
+
+def test_dividends_decrement_and_rates_of_exchange(tmp_path: Path):
+    """By the escrowed cash, by a decrement, by the fixed rate's vol and correlation, by the rate of the day."""
+    df = exp(-0.04)
+    found, _ = greeks(tmp_path, HEAD + CALL + market("currency: EUR, dividends: [{ex: 0.5y, cash: 8}], vol: 20%"))
+    left = 100 - 8 * exp(-0.02)
+    near(found["dividend", "harbour"], -exp(-0.02) * black(left * exp(0.04), 0.2)[1])
+    found, _ = greeks(tmp_path, HEAD + CALL + market(
+        "currency: EUR, underlying: total return, decrement: 5%, vol: 20%"))
+    near(found["decrement", "harbour"], -1e-4 * df * black(100 * exp(-0.01), 0.2)[1] * 100 * exp(-0.01))
+    quanto = "currency: USD, yield: 1%, vol: 20%, quanto: {fx_vol: 10%, fx_correlation: 50%, fx: EUR per USD}"
+    found, _ = greeks(tmp_path, HEAD + "conversion: {harbour: quanto}\n" + CALL + market(quanto))
+    forward = 100 * exp(0.01 - 0.5 * 0.2 * 0.1)
+    slope = df * black(forward, 0.2)[1] * forward
+    near(found["fx vega", "harbour"], -0.01 * slope * 0.5 * 0.2)
+    near(found["fx correlation", "harbour"], -0.01 * slope * 0.2 * 0.1)
+    rate = "fx: {EUR per USD: {spot: 0.9, vol: 12%}}\ncorrelation: {harbour/EUR per USD: 40%}\n"
+    found, _ = greeks(tmp_path, HEAD + "conversion: {harbour: composite}\n" + CALL.replace("100", "90")
+                      + market("currency: USD, yield: 1%, vol: 20%", rate))
+    vol = sqrt(0.04 + 0.0144 + 2 * 0.4 * 0.2 * 0.12)
+    _, by_forward, by_vol = black(90 * exp(0.03), vol, strike=90.0)
+    near(found["fx delta", "EUR per USD"], df * by_forward * 100 * exp(0.03))
+    near(found["fx vega", "EUR per USD"], 0.01 * df * by_vol * (0.12 + 0.4 * 0.2) / vol)
+    near(found["correlation", "harbour/EUR per USD"], 0.01 * df * by_vol * 0.2 * 0.12 / vol)

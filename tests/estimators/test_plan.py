@@ -124,9 +124,18 @@ def test_an_easy_target_still_gets_a_decent_run():
     assert plan(precision(None, "50%", None), lognormal, never).paths == FEWEST_PLANNED
 
 
-def test_an_impossible_target_stops_at_the_most():
-    """Never more than can be counted."""
-    assert plan(precision(None, "1e-12", None), lognormal, never).paths == MOST_PATHS
+@pytest.mark.parametrize(("within", "said", "reached"), [
+    ("1e-12", "'within 1e-12' needs about 1.5e+24 paths, which would take about 2,300,000,000 years; at most "
+              "1,099,511,627,776 are run, which reach about 1.2e-06", "1.2e-6"),
+    ("0.001bp", "'within 0.001 bp' needs about 1.5e+14 paths, which would take about 84 days; at most "
+                "1,099,511,627,776 are run, which reach about 0.012 bp", "0.012bp"),
+])
+def test_an_impossible_target_is_refused(within: str, said: str, reached: str):
+    """With the paths and the time that it would need, and what can be reached."""
+    with pytest.raises(RequestError) as trouble:
+        plan(precision(None, within, None), lognormal, never, pace=5e-8)
+    assert str(trouble.value) == said
+    assert 0.5 * MOST_PATHS < plan(precision(None, reached, None), lognormal, never).paths <= MOST_PATHS
 
 
 def test_an_exact_price_needs_no_pilot():

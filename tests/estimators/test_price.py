@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import signal
+import time
 from functools import cache
 
 import pytest
@@ -10,7 +11,7 @@ from front_door import CALL, EXAMPLES, MARKET, SEED
 from helpers import request_of
 
 from mcx.checked.load import load
-from mcx.dates.dating import date_contract
+from mcx.dates.dating import date_on
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.plan import FEWEST_PLANNED, FIRST_PILOT, precision
 from mcx.estimators.price import Ready, Valuation, prepare, value
@@ -29,7 +30,7 @@ events:
 
 
 def ready_of(request, number: int = 0) -> Ready:
-    dated, faults = date_contract(request.contracts[number], request.market.valuation)
+    dated, faults = date_on(request.contracts[number], request.market)
     assert not faults
     found, faults = prepare(dated, request.market)
     assert not faults
@@ -157,6 +158,19 @@ def test_interruption_gives_the_estimate_so_far(monkeypatch: pytest.MonkeyPatch)
     assert found.interrupted and found.plan.paths == 1600 and found.price.paths == 512
     assert found.results == value(autocall(), precision(512, None, None), seed=SEED).results
     assert [stage.paths for stage in found.stages] == [448, 512]
+
+
+def test_no_clock_runs_while_kernels_are_loaded(monkeypatch: pytest.MonkeyPatch):
+    """Compiling them, or reading them from a file, is no time of the paths."""
+    from mcx.estimators import price
+
+    told, clock = [], time.perf_counter
+    monkeypatch.setattr(price, "load_kernels", lambda program, notice: told.append("loaded"))
+    monkeypatch.setattr(price.time, "perf_counter", lambda: told.append("clock read") or clock())
+    for asked in (THOUSAND, precision(None, None, 0.001)):
+        told.clear()
+        value(ready_of(request_of(CALL + MARKET)), asked, seed=SEED)
+        assert told[0] == "loaded" and told.count("loaded") == 1 and "clock read" in told
 
 
 def test_an_exact_price_is_not_piloted():

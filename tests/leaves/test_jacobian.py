@@ -106,3 +106,55 @@ def test_the_same_market_where_nothing_moves():
     assert moved(case.market, {}) == case.market
     assert moved(case.market, {number: 1.0}) != case.market
     assert replace(case.market) == ready().market
+
+
+ABROAD = """contract: c
+currency: EUR
+notional: 100
+assets: [harbour, lantern, quarry]
+conversion: {lantern: quanto, quarry: composite}
+payoff: rainbow_option
+terms: {side: call, which: worst, strike: 100%, initial: {harbour: 100, lantern: 50, quarry: 80}, expiry: 1.6y}
+---
+market: 0y
+rates: {EUR: 2%, USD: 4%, CHF: 1%}
+funding: {EUR: 50 bp}
+fx: {CHF per EUR: {spot: 0.95, vol: {1y: 6%, 2y: 7%}}}
+assets:
+  harbour: {spot: 100, currency: EUR, underlying: total return, decrement: 5 points, vol: 20%}
+  lantern:
+    spot: 52.5
+    currency: USD
+    dividends: [{ex: 0.5y, cash: 1.2, share: 1%}, {ex: 1y, cash: 0.8}]
+    dividend_blend: {cash_until: 0.8y, share_from: 1.1y}
+    vol: {1y: 31%, 2y: 29%}
+    quanto: {fx_vol: {1y: 8%, 2y: 9%}, fx_correlation: -30%, fx: USD per EUR}
+  quarry: {spot: 80, currency: CHF, underlying: total return, decrement: 4%, vol: 24%}
+correlation:
+  harbour/lantern: 40%
+  harbour/quarry: -20%
+  lantern/quarry: 10%
+  harbour/CHF per EUR: 15%
+  lantern/CHF per EUR: -5%
+  quarry/CHF per EUR: 25%
+"""
+
+
+def test_dividends_decrements_and_rates_of_exchange():
+    """They are listed, and each column is the central difference of the map."""
+    case = prepare(ABROAD)
+    market, contract, leaves = case.market, case.dated.contract, case.unrolled.tape.leaves
+    numbers = inputs(market, contract)
+    assert [str(number) for number in numbers if number.kind not in ("spot", "vol", "rate", "funding")] == [
+        "decrement points of harbour", "dividend of lantern at 0.5y", "dividend share of lantern at 0.5y",
+        "dividend of lantern at 1y", "fx vol of lantern at 1y", "fx vol of lantern at 2y", "fx correlation of lantern",
+        "decrement of quarry", "fx spot of CHF per EUR", "fx vol of CHF per EUR at 1y", "fx vol of CHF per EUR at 2y",
+        "correlation of harbour/lantern", "correlation of harbour/quarry", "correlation of harbour/CHF per EUR",
+        "correlation of lantern/quarry", "correlation of lantern/CHF per EUR", "correlation of quarry/CHF per EUR"]
+    assert without_derivative(market, contract) == {}
+    found = jacobian(market, contract, leaves)
+    for column, number in enumerate(numbers):
+        step = 1e-5 * (number.value if number.kind in ("spot", "fx spot", "decrement points", "dividend") else 1.0)
+        up, down = (MarketMap(moved(market, {number: side * step}), contract).values(leaves) for side in (1, -1))
+        np.testing.assert_allclose(found[:, column], (up - down) / (2 * step), rtol=1e-6, atol=1e-8, err_msg=str(number))
+        assert np.any(found[:, column]), number

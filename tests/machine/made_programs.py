@@ -52,7 +52,8 @@ def asian(dates: int, spot: float = 100.0, strike: float = 100.0, rate: float = 
     x, moved, level, total = range(dates, dates + 4)
     lines = [(Op.STEP, x, start, s, 0), (Op.EXP, total, x)]
     for date in range(1, dates):
-        lines += [(Op.ADD, moved, x, m), (Op.STEP, x, moved, s, date), (Op.EXP, level, x), (Op.ADD, total, total, level)]
+        lines += [(Op.ADD, moved, x, m), (Op.STEP, x, moved, s, date), (Op.EXP, level, x),
+                  (Op.ADD, total, total, level)]
     lines += [
         (Op.MUL, total, total, weight),
         (Op.SUB, total, total, k),

@@ -12,9 +12,10 @@ from made_programs import SEED, asian, many, program
 from scipy.special import ndtr
 
 from mcx.machine import jit
+from mcx.machine.blocks import sweep
 from mcx.machine.jit import COMPILED
 from mcx.machine.prepare import prepare
-from mcx.machine.run import COMPILING, NonFinitePath, NonFiniteSum, Stream, draws, levels, run, values_by_path
+from mcx.machine.run import COMPILING, NonFinitePath, NonFiniteSum, Stream, draws, levels, load_kernels, run, values_by_path
 from mcx.machine.sizes import batch_for, cost, lanes_for
 from mcx.tape.ops import Op
 from mcx.tape.program import ALONE, Program
@@ -244,6 +245,21 @@ def test_compiling_is_announced_only_when_it_happens(monkeypatch: pytest.MonkeyP
     assert told == []
     monkeypatch.setattr(jit, "is_cold", lambda entry: entry == "sweep")
     run(asian(2), seed=SEED, paths=64, notice=told.append)
+    assert told == [COMPILING]
+
+
+@pytest.mark.skipif(not COMPILED, reason="nothing is compiled")
+def test_kernels_are_loaded_as_runs_need_them(monkeypatch: pytest.MonkeyPatch):
+    """After loading a run finds all that it needs: one kernel, for arrays of the same kinds, whatever the run."""
+    load_kernels(asian(2))
+    kinds = set(sweep.signatures)
+    for made in (asian(2), summed(asian(2)), program([], rows=2, outputs=[0, 1], normals=2)):
+        run(made, seed=SEED, paths=200)
+        levels(made, seed=SEED, numbers=[1, 5])
+    assert set(sweep.signatures) == kinds and len(kinds) == 1
+    told: list[str] = []
+    monkeypatch.setattr(jit, "is_cold", lambda entry: entry == "sweep")
+    load_kernels(asian(2), told.append)
     assert told == [COMPILING]
 
 

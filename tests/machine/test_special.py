@@ -54,14 +54,16 @@ def test_logarithm_to_two_units(width: float):
 @pytest.mark.filterwarnings("ignore::RuntimeWarning")
 def test_exponential_at_the_ends():
     """Overflow, gradual underflow, infinities and NaN come out as IEEE has them, beside usual lanes."""
-    x = np.array([0.0, -0.0, 1.0, 709.78, 709.79, 710.0, 1e300, np.inf, -708.5, -745.1, -745.2, -750.0, -np.inf, np.nan])
+    x = np.array([0.0, -0.0, 1.0, 709.78, 709.79, 710.0, 1e300, np.inf, -708.5, -745.1, -745.2, -750.0, -np.inf,
+                  np.nan])
     np.testing.assert_allclose(exponential(x), np.exp(x), rtol=5e-16)
 
 
 @pytest.mark.filterwarnings("ignore::RuntimeWarning")
 def test_logarithm_at_the_ends():
     """Zero, negative numbers, the smallest and the largest, infinity and NaN come out as IEEE has them."""
-    x = np.array([0.0, -0.0, -1.0, -TINY, -np.inf, 5e-324, TINY / 3, TINY, 1.0, np.finfo(np.float64).max, np.inf, np.nan])
+    x = np.array([0.0, -0.0, -1.0, -TINY, -np.inf, 5e-324, TINY / 3, TINY, 1.0, np.finfo(np.float64).max, np.inf,
+                  np.nan])
     np.testing.assert_allclose(logarithm(x), np.log(x), rtol=5e-16)
 
 

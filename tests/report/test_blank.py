@@ -19,7 +19,7 @@ from mcx.text.documents import parse_documents
 ASSETS = ("alder", "birch", "cedar")
 EMPTY = re.compile(r"( *)([\w./]+):\s*(#.*)?")
 OPTIONAL = re.compile(r"( *)# (\w+):\s*# optional;.*")
-HEAD = {"currency": "EUR", "notional": "1000000", "units": "10", "start": "2026-12-01", "day_count": "30/360",
+HEAD = {"currency": "EUR", "notional": "1000000", "units": "10", "denomination": "1000", "start": "2026-12-01", "day_count": "30/360",
         "settlement": "2 business days", "holidays": "ECB", "roll": "modified following", "market": "2026-12-01",
         "rates": "{EUR: {1y: 2%, 3y: 2.5%}}", "funding": "{EUR: 80 bp}", "spot": "100", "yield": "2%", "vol": "20%"}
 BY_TYPE = {"number": "1", "percent": "80%", "level": "100", "watch": "2028-12-01", "flag": "true", "date": "2028-12-01",
@@ -103,7 +103,9 @@ def test_day_count_is_asked_for_only_where_it_counts():
 
 def test_size_is_asked_for_as_the_definition_pays():
     """Units for money per unit, else a notional; both are named where the definition leaves it open."""
-    money, either = package.blank("european", ["alder"]), package.blank("autocall", ["alder"])
+    money, either = package.blank("european", ["alder"]), package.blank("rainbow_option", ["alder", "birch"])
+    note = package.blank("autocall", ["alder"])
+    assert "\nnotional:" in note and "units" not in note
     assert "\nunits:" in money and "notional" not in money
     assert "\nnotional:" in either and "'units:'" in either
 
@@ -130,6 +132,7 @@ def test_from_the_command_line():
     ("exchange_option", "alder", "'exchange_option' takes 2 assets, not 1"),
     ("basket_option", "alder", "'basket_option' takes 2 or more assets, not 1"),
     ("autocall", "alder,alder", "an asset is named twice"), ("autocall", "", "not ''"), ("autocall", "a,,b", "not ''"),
+    ("autocall", "a b,c", "not 'a b'"),
     ("autocall", "a: b", "not 'a: b'"), ("europaen", "alder", "did you mean 'european'?"),
     ("zzz", "a", "'mcx payoffs' lists"),
 ])

@@ -79,7 +79,7 @@ def test_everything_wrong_in_csv_at_once():
     """Line and column of each cell; a line of the wrong length as a whole."""
     text = "date,harbour,zzz\n2026-13-01,1,1\n2026-12-01, -4,1\n2026-12-02,1\n2026-12-03,1,1\n2026-12-03,2,1\n"
     assert faults_of(text, "l.csv") == [
-        "l.csv:1:14: 'zzz' is no asset of the contract; expected one of harbour, lantern",
+        "l.csv:1:14: 'zzz' is no asset of the contract; expected harbour or lantern, with levels by date",
         *(fault for fault in faults_of(text, "l.csv") if fault.startswith(("l.csv:2:1: ", "l.csv:3:13: "))),
         "l.csv:4:1: expected 3 values, found 2",
         "l.csv:6:1: a second level of 'harbour' on 2026-12-03"]

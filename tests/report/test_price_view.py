@@ -90,6 +90,16 @@ def test_what_holds_for_all_is_said_once(note: PriceResult, monkeypatch: pytest.
     assert "interrupted" not in text and "not valued" not in text
 
 
+def test_a_table_has_a_column_of_units(note: PriceResult, monkeypatch: pytest.MonkeyPatch):
+    """Headed, and whole on a narrow page beside long titles."""
+    note = replace(note, contract="Harbour, Quarry and Orchard memory autocall with a very long title indeed")
+    option = replace(note, contract="Option", notional=None, units=1.0)
+    lines = shown(monkeypatch, show_prices, PriceTable((note, option))).splitlines()
+    assert lines[0].split()[:3] == ["contract", "unit", "price"]
+    end = lines[0].index("unit") + len("unit")
+    assert lines[1][:end].endswith(" %") and next(line for line in lines if "Option" in line)[:end].endswith(" per unit")
+
+
 def test_an_interrupted_price_is_marked(note: PriceResult, monkeypatch: pytest.MonkeyPatch):
     """Before the number, in its row of a table, and with the contracts that were not reached."""
     stopped = replace(note, interrupted=True)

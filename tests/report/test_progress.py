@@ -7,6 +7,7 @@ import sys
 
 import pytest
 
+from mcx.machine.run import COMPILING
 from mcx.report.progress import Bar
 
 
@@ -52,12 +53,16 @@ def test_notices_stay(monkeypatch: pytest.MonkeyPatch):
 
 
 def test_a_command_shows_it_only_there(monkeypatch: pytest.MonkeyPatch):
-    """The same door gives no callbacks where standard error is no terminal."""
+    """Where standard error is no terminal there is no progress, and no word but of what takes very long."""
     from mcx.cli import _progress
 
     terminal_for(monkeypatch)
     with _progress() as (progress, notice):
         assert progress is not None and notice is not None
     monkeypatch.setattr(sys, "stderr", io.StringIO())
-    with _progress() as found:
-        assert found == (None, None)
+    with _progress() as (progress, notice):
+        assert progress is None
+        notice(COMPILING)
+        assert sys.stderr.getvalue() == ""
+        notice("1,000,000,000,000 paths will take about 4 hours")
+    assert sys.stderr.getvalue() == "1,000,000,000,000 paths will take about 4 hours\n"

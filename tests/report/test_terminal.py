@@ -78,11 +78,11 @@ def test_paragraphs(monkeypatch: pytest.MonkeyPatch):
     """Lines wrap at the width of the page, behind dashes and names with an indent; long names are folded, not cut."""
     def fill(page: Page) -> None:
         page.items(["one two three four five six"])
-        page.named([("barrier_reverse_convertible", "[red]a :smile: b[/red]")])
+        page.named([("barrier_reverse_convertible_on_three", "[red]a :smile: b[/red]")])
 
     assert rendered(monkeypatch, 20, fill).splitlines()[:2] == ["- one two three four", "  five six"]
     wide = rendered(monkeypatch, 80, fill)
-    assert wide.splitlines()[1:] == ["barrier_reverse_converti  [red]a :smile: b[/red]", "ble"]
+    assert wide.splitlines()[1:] == ["barrier_reverse_convertible_  [red]a :smile: b[/red]", "on_three"]
 
 
 @pytest.mark.parametrize("width", [30, 60, 80])

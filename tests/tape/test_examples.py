@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 from mcx.checked.load import load
-from mcx.dates.dating import date_contract
+from mcx.dates.dating import date_on
 from mcx.leaves.market_map import MarketMap
 from mcx.tape.interpret import interpret, outputs
 from mcx.tape.registers import lower
@@ -25,7 +25,7 @@ def test_an_example_becomes_a_tape(file: Path):
     at most once."""
     request = load([file])
     for contract in request.contracts:
-        dated, faults = date_contract(contract, request.market.valuation)
+        dated, faults = date_on(contract, request.market)
         market = MarketMap.of(request.market, dated)
         unrolled = unroll(dated, nodes=market.nodes(), makeup=market.makeup())
         assert not faults and not unrolled.faults

@@ -68,6 +68,10 @@ SMOOTH = [
     "log(spot) * sqrt(spot) / spot",
     "strike / spot",
     "spot ** 0.5",
+    "sqrt((spot - strike) ** 2 + (spot - higher) ** 2)",
+    "sqrt(min(3 * log(spot / strike) ** 2 / 2, 0.04))",
+    "max(spot - strike, 0) ** 1.5",
+    "log(max(spot - strike, 1))",
 ]
 JUMPING = [
     "1 if spot > strike else 0",
@@ -104,6 +108,28 @@ def test_a_formula_with_jumps(formula: str):
 def test_a_division_by_what_may_be_zero_is_a_jump(formula: str):
     """A sign can be written as a division."""
     assert kinds(price_jumps(event("end", pay(formula)))) == ["division"]
+
+
+@pytest.mark.parametrize("formula", ["sqrt(max(spot - strike, 0))", "abs(spot - strike) ** 0.1",
+                                     "sqrt(abs(spot - strike))", "log(abs(spot - strike))",
+                                     "((spot - strike) ** 2) ** 0.25"])
+def test_a_root_or_log_of_what_may_be_zero_has_no_bounded_slope(formula: str):
+    """It does not jump, or not by a finite amount; its slopes path by path have no finite variance."""
+    assert kinds(price_jumps(event("end", pay(formula)))) == ["root"]
+
+
+@pytest.mark.parametrize("moved", [99.9999, 100.0, 100.0001])
+def test_what_is_decided_today_holds_in_the_analysis(moved: float):
+    """Today's level is so near the strike that the small moves of the analysis would turn the condition: the payment
+    is that of the branch that is taken."""
+    today = running("above_today", "latest", "spot >= strike", "now")
+    digital = event("end", pay("(1 if spot > higher else 0) if above_today else spot"))
+    dated = made({"now": (0.0,), "end": (1.0,)}, [digital], [today], TERMS)
+    tape = unroll(dated, nodes=()).tape
+    values = np.array([moved if leaf.kind is LeafKind.FORWARD else value
+                       for leaf, value in zip(tape.leaves, leaf_values(tape), strict=True)])
+    (found,) = jumps(tape, values, [tape.outputs[0].value])
+    assert kinds(found) == (["condition"] if moved >= 100.0 else [])
 
 
 def test_the_place_is_that_of_the_comparison():

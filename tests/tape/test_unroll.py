@@ -269,6 +269,13 @@ def test_parts_are_sorted_where_any_is_stated():
     assert not any(name.startswith("part") for name in results(made(DATES, [CALL]), PATH))
 
 
+def test_what_stands_below_a_certain_end_is_not_reached():
+    """It may read what has no value there, since nobody asks."""
+    dated = made({"t": (1.0, 2.0), "late": (2.0,)}, [event("t", end()), event("t", pay("1"), condition="average > 1")],
+                 [running("average", "average", "spot", "late")])
+    assert unroll(dated, nodes=()).faults == ()
+
+
 def test_an_event_in_both_branches_ends_whatever_happens():
     """`end` on both sides of a condition ends everywhere."""
     both = event("all", pay("1"), end(), condition="spot > 100", otherwise=(pay("2"), end()), part="first")

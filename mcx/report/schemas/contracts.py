@@ -2,14 +2,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Iterator
 
 from mcx.checked.conversions import CONVERSIONS
 from mcx.checked.day_count_names import DAY_COUNTS
-from mcx.checked.payoff import MONEY, MULTIPLES, Payoff, Term
-from mcx.checked.read_contract import CALENDAR_KEYS, OPEN, REQUIRED, ROLLS, uses_period
+from mcx.checked.payoff import MONEY, MULTIPLES, Deliver, Payoff, Term
+from mcx.checked.read_contract import CALENDAR_KEYS, OPEN, PAST, REQUIRED, ROLLS, uses_period
+from mcx.checked.read_history import FACTS, WATCHABLE
 from mcx.checked.read_terms import BOUNDS
-from mcx.checked.term_values import DATED_TYPES, MOST_STEPS, ONE_OF_MANY, SOME_OF_MANY
+from mcx.checked.term_values import DATED_TYPES, MOST_STEPS, OBSERVED, ONE_OF_MANY, SOME_OF_MANY
 from mcx.report.schemas.shapes import (
     CURRENCY,
     DATE,
@@ -33,6 +34,7 @@ from mcx.report.schemas.shapes import (
 from mcx.text.located import Scalar
 
 NUMERIC = {"number": number, "percent": percent, "level": amount}
+WITH_DAYS = (*DATED_TYPES, "level")
 DATED = ("start", "settlement", "calendar")
 
 
@@ -45,6 +47,7 @@ def contract(payoffs: Iterable[Payoff], only: bool) -> Schema:
               for each in payoffs]
     return mapping({
         "contract": line("the title"),
+        "denomination": amount() | {"description": "nominal amount of one note, where shares are delivered"},
         "currency": text(CURRENCY, "as EUR: what the contract pays in"),
         "notional": amount() | {"description": "payments are multiples of it"},
         "units": amount() | {"description": "payments are money per unit"},
@@ -57,6 +60,9 @@ def contract(payoffs: Iterable[Payoff], only: bool) -> Schema:
         "conversion": by_name(words(CONVERSIONS), least=0),
         "payoff": name,
         "terms": {"type": "object"},
+        "happened": refer("what happened"),
+        "disruption": _by_date(either(text(f"^{DATE}$"), amount()), NAME),
+        "adjustments": _by_date(amount(), NAME),
     }, REQUIRED) | {"allOf": rules}
 
 
@@ -74,17 +80,24 @@ def definitions() -> dict[str, Schema]:
             "if": {"properties": {"holidays": {"type": "array", "minItems": 2}}},
             "then": {"required": ["open"]}, "else": absent("open")},
         "day": day,
+        "what happened": _by_date({"type": ["boolean", "number", "string"]}),
         "step": text("^[0-9]{0,4}[1-9][0-9]{0,4} +(business day|day|week|month|year)s?$"),
         "ends on a date": {"properties": {"until": written}},
-        "has a date": _anywhere(written),
-        "has a time": _anywhere(text(f"^{TIME}$")),
+        "has a date": _anywhere(written, refer("has a date")),
+        "has a time": _anywhere(text(f"^{TIME}$"), refer("has a time")),
     }
 
 
-def _anywhere(day: Schema) -> Schema:
-    """A value of a date term in which such a day is written out."""
+def _by_date(value: Schema, names: str = "") -> Schema:
+    """Values by name and by date."""
+    return by_name(by_name(value, f"^{DATE}$"), names, least=0)
+
+
+def _anywhere(day: Schema, again: Schema) -> Schema:
+    """A value in which such a day is written out, or the dates on which a level is observed; `again` names this."""
     inside = {"type": "array", "contains": day}
     rule = either(*({"properties": {key: day}, "required": [key]} for key in ("from", "until")),
+                  *({"properties": {key: again}, "required": [key]} for key in OBSERVED),
                   {"properties": {"continuous": inside}, "required": ["continuous"]})
     return either(day, inside, {"type": "object"} | rule)
 
@@ -97,20 +110,30 @@ def _on(payoff: Payoff) -> Schema:
     terms = mapping({term.name: _term(term, payoff) for term in payoff.terms}, needed)
     dated = [*DATED, *(["day_count"] if uses_period(payoff) else [])]
     size = {MONEY: absent("notional"), MULTIPLES: absent("units")}.get(payoff.pays, {})
-    rules = [size] if size else []
-    if any(term.type in DATED_TYPES for term in payoff.terms):
+    whole = {"if": {"required": ["notional"]}, "then": {"required": ["denomination"]}, "else": absent("denomination")}
+    delivers = any(isinstance(pay, Deliver) for pay in payoff.payments())
+    rules = [*([size] if size else []), whole if delivers else absent("denomination"),
+             {"properties": {"happened": {"properties": dict(_happened(payoff)), "additionalProperties": False}}}]
+    if any(term.type in WITH_DAYS for term in payoff.terms):
         times = {"properties": {"terms": {"allOf": [_some(payoff, "has a time"),
                                                     {"not": _some(payoff, "has a date")}]}}}
-        rules.append({"if": times, "then": absent(*CALENDAR_KEYS), "else": {"required": dated}})
+        rules.append({"if": times, "then": absent(*CALENDAR_KEYS, *PAST), "else": {"required": dated}})
         rules.append({"not": {"properties": {"terms": {"allOf": [_some(payoff, "has a time"),
                                                                  _some(payoff, "has a date")]}}}})
-    return {"properties": {"assets": assets, "terms": terms}} | ({"allOf": rules} if rules else {})
+    return {"properties": {"assets": assets, "terms": terms}, "allOf": rules}
+
+
+def _happened(payoff: Payoff) -> Iterator[tuple[str, Schema]]:
+    """Running values of which a contract may say what they have been."""
+    for each in payoff.running:
+        if each.how in WATCHABLE:
+            yield each.name, by_name({"type": "boolean"} if each.how in FACTS else number(), f"^{DATE}$")
 
 
 def _some(payoff: Payoff, what: str) -> Schema:
     """Terms of which one has such a day."""
     return either(*({"properties": {term.name: refer(what)}, "required": [term.name]}
-                    for term in payoff.terms if term.type in DATED_TYPES))
+                    for term in payoff.terms if term.type in WITH_DAYS))
 
 
 def _term(term: Term, payoff: Payoff) -> Schema:
@@ -136,11 +159,18 @@ def _value(term: Term, payoff: Payoff) -> Schema:
     bounds = {key: limit for key in BOUNDS if (limit := getattr(term, key)) is not None}
     one = NUMERIC[term.type](bounds)
     row = either(one, by_name(one, NAME), listed(one)) if term.type == "level" or term.per == "assets" else one
+    row = either(*row["anyOf"], *_observed(payoff)) if term.type == "level" else row
     return either(row, listed(row)) if term.per not in ("", "assets") else row
 
 
 def _day(payoff: Payoff) -> Schema:
     return either(refer("day"), text(_named(payoff, ONE_OF_MANY, many=False)))
+
+
+def _observed(payoff: Payoff) -> Iterator[Schema]:
+    """A level that is observed: on a date, or an average or extreme over several."""
+    for how in OBSERVED:
+        yield mapping({how: _day(payoff) if how == "fixing" else _days(payoff, continuous=False)}, (how,))
 
 
 def _days(payoff: Payoff, continuous: bool) -> Schema:

@@ -5,17 +5,16 @@ from __future__ import annotations
 from collections.abc import Sequence
 
 from mcx.checked.payoff import Payoff
-from mcx.report.schemas import contracts, markets, payoffs
-from mcx.report.schemas.shapes import Schema, line, refer
+from mcx.report.schemas import contracts, markets, payoffs, quotes
+from mcx.report.schemas.shapes import Schema, refer
 from mcx.text.documents import TELLING_KEYS
 
 DRAFT = "http://json-schema.org/draft-07/schema#"
 
 
 def schema(definitions: Sequence[Payoff], title: str, only: bool) -> Schema:
-    """The schema of documents: contracts on these definitions (with `only` on no others), markets and definitions.
-
-    A quote is told apart but its keys are not known yet. Follows JSON Schema draft 7, which most editors read.
+    """The schema of documents: contracts on these definitions (with `only` on no others), markets, quotes and
+    definitions. Follows JSON Schema draft 7, which most editors read.
     """
     kinds: Schema = refer("payoff")
     for kind in reversed(TELLING_KEYS):
@@ -28,7 +27,7 @@ def schema(definitions: Sequence[Payoff], title: str, only: bool) -> Schema:
         "definitions": {
             "contract": contracts.contract(definitions, only),
             "market": markets.market(),
-            "quote": {"type": "object", "properties": {"quote": line("who quotes")}},
+            "quote": quotes.quote(),
             "payoff": payoffs.payoff(),
             **contracts.definitions(),
             **markets.definitions(),

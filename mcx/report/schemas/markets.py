@@ -41,6 +41,7 @@ def market() -> Schema:
                       least=0),
         "assets": by_name(refer("asset"), NAME),
         "correlation": by_name(refer("correlation"), "^[^/]+/[^/]+$", least=0),
+        "fixings": either(text(r"\.[cC][sS][vV]$"), by_name(by_name(amount(), f"^{DATE}$", least=0), least=0)),
         "uncertainty": mapping({key: refer("half-width") for key in UNCERTAIN}),
         "source": line("where the numbers come from"),
         "as_of": line("when they were observed"),
@@ -48,7 +49,7 @@ def market() -> Schema:
     assert set(keys) == {*KEYS, "market", "rates", "assets"}, "a key of markets has no shape"
     dated = {"properties": {"assets": {"additionalProperties": {"required": ["currency"]}}}}
     return mapping(keys, ("market", "rates", "assets")) | {
-        "if": {"properties": {"market": {"const": "0y"}}}, "else": dated}
+        "if": {"properties": {"market": {"const": "0y"}}}, "then": absent("fixings"), "else": dated}
 
 
 def definitions() -> dict[str, Schema]:

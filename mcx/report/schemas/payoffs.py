@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 from mcx.checked.payoff import MONEY, MULTIPLES
-from mcx.checked.read_events import ACTIONS, KINDS_OF_LEG, OF_PAY, PARTS
+from mcx.checked.read_events import ACTIONS, KINDS_OF_LEG, OF_DELIVER, OF_PAY, PARTS
 from mcx.checked.read_payoff import HOWS, KEYS, WATCHABLE
+from mcx.checked.read_readings import CHANGES, MOVES, OF_EVENT
 from mcx.checked.read_terms import BOUNDS, NUMERIC, TYPES
 from mcx.report.schemas.shapes import (
     Schema,
@@ -35,6 +36,7 @@ def payoff() -> Schema:
         "let": by_name(refer("formula"), NAME, least=0),
         "running": by_name(refer("running"), NAME, least=0),
         "events": listed(refer("event")),
+        "readings": listed(refer("reading"), least=0),
     }
     assert set(keys) == {*KEYS, "payoff", "events"}, "a key of definitions has no shape"
     return mapping(keys, ("payoff", "events"))
@@ -49,6 +51,7 @@ def definitions() -> dict[str, Schema]:
         "running": _running(),
         "event": _event(),
         "action": _action(),
+        "reading": _reading(),
     }
 
 
@@ -83,14 +86,16 @@ def _running() -> Schema:
 
 
 def _of_an_action() -> dict[str, Schema]:
-    return {"pay": refer("formula"), "set": by_name(refer("formula"), NAME), "end": {"type": "null"}, "as": line(),
-            "part": words(KINDS_OF_LEG), "due": line("a date term, or same day")}
+    return {"pay": refer("formula"), "deliver": refer("formula"), "of": refer("formula"),
+            "set": by_name(refer("formula"), NAME), "end": {"type": "null"}, "as": line(), "part": words(KINDS_OF_LEG),
+            "due": line("a date term, or same day")}
 
 
 def _one_action() -> Schema:
     """Exactly one of the actions; what belongs to a payment stands beside one."""
     return {"oneOf": [{"required": [action]} for action in ACTIONS],
-            "dependencies": dict.fromkeys(OF_PAY, ["pay"])}
+            "dependencies": {**dict.fromkeys(OF_PAY, {"anyOf": [{"required": ["pay"]}, {"required": ["deliver"]}]}),
+                             "of": ["deliver"]}}
 
 
 def _action() -> Schema:
@@ -104,5 +109,18 @@ def _event() -> Schema:
         "at": refer("at"), "from": line(), "until": line(), "name": line("of the condition, in every report"),
         "if": refer("formula"), "then": actions, "else": actions, **_of_an_action(),
     }, ("at",))
-    return keys | {"if": {"required": ["if"]}, "then": {"required": ["then"]} | absent(*ACTIONS, *OF_PAY),
+    return keys | {"if": {"required": ["if"]}, "then": {"required": ["then"]} | absent(*ACTIONS, *OF_DELIVER),
                    "else": absent("then", "else") | _one_action()}
+
+
+def _reading() -> Schema:
+    """Another reading: what it changes of the definition, and of an event its keys or its place."""
+    keys = _event()["properties"]
+    change = mapping({**{key: keys[key] for key in OF_EVENT}, **{move: line("the name of an event") for move in MOVES}})
+    shapes: dict[str, Schema] = {
+        "terms": by_name({}, NAME), "later": by_name(text("^[1-9][0-9]{0,4} +business days?$"), NAME),
+        "let": by_name(refer("formula"), NAME), "running": by_name(refer("running"), NAME), "events": by_name(change),
+    }
+    assert set(shapes) == set(CHANGES), "a change of readings has no shape"
+    return mapping({"name": line(), "about": line(), **shapes}, ("name", "about")) | {
+        "anyOf": [{"required": [key]} for key in CHANGES]}

@@ -18,7 +18,7 @@ DATE = "[0-9]{4}-(0[1-9]|1[0-2])-(0[1-9]|[12][0-9]|3[01])"
 TIME = rf"{DIGITS}[my]"
 TENOR = rf"{DIGITS}[dwmy]"
 CURRENCY = "^[A-Z]{3}$"
-NAME = r"^[A-Za-z0-9_\u0080-\uffff][A-Za-z0-9_ .&\u0080-\uffff-]*$"  # of an asset
+NAME = r"^[A-Za-z0-9_\u0080-\uffff][A-Za-z0-9_.&\u0080-\uffff-]*$"  # of an asset
 
 CORE_NUMBER = re.compile(r"[-+]?(\.[0-9]+|[0-9]+(\.[0-9]*)?)([eE][-+]?[0-9]+)?")
 CORE_WORDS = {"": None, "~": None, "null": None, "Null": None, "NULL": None, "true": True, "True": True, "TRUE": True,

@@ -1,0 +1,120 @@
+"""The state of a contract that has lived for a while: what has happened, what is owed, what accrues."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+from mcx.checked.payoff import Pay
+from mcx.dates.dated_contract import DatedContract, Day
+from mcx.dates.day_counts import year_fraction
+from mcx.estimators.price import Ready
+from mcx.leaves.market_map import MarketMap
+from mcx.report.distances import distances
+from mcx.report.events import event_label
+from mcx.report.results import Fixed, Owed, PastLine, Payment, Sentence, StateView
+from mcx.report.wording import figure
+from mcx.tape.state import State
+
+
+def owed(ready: Ready) -> tuple[Owed, ...]:
+    """Amounts that are fixed and not yet paid, in order of their payment."""
+    return owed_amounts(ready.dated, ready.unrolled.state, ready.market)
+
+
+def owed_amounts(dated: DatedContract, state: State, market: MarketMap) -> tuple[Owed, ...]:
+    """As `owed`."""
+    size = dated.contract.size
+    found = sorted((each for each in state.payments if each.owed and each.amount), key=lambda each: each.due.time)
+    return tuple(
+        Owed(str(each.due), each.pay.leg, str(each.day), each.amount, each.amount * size,
+             each.amount * size * float(market.funded_discount(each.due.time))) for each in found)
+
+
+def accrued(dated: DatedContract, state: State) -> float:
+    """Interest of certain coupons in the period that runs on the valuation date, in the unit of the price: the coupon
+    times the part of its period that has passed, by the contract's day count (without one, by calendar days)."""
+    today, count = dated.valuation, dated.contract.day_count
+    total = 0.0
+    for each in state.accruing:
+        since, until = each.since.date, each.occasion.day.date
+        passed = (today - since).days / (until - since).days
+        if count and "ICMA" not in count:
+            passed = year_fraction(count, since, today) / year_fraction(count, since, until)
+        total += each.amount * passed
+    return total
+
+
+def standing(ready: Ready) -> Iterator[str]:
+    """Shares that are owed; that a contract has ended, and what is still to come of it."""
+    state = ready.unrolled.state
+    yield from to_deliver(ready.dated, state)
+    if state.ended is not None:
+        due = [each for each in state.payments if each.owed and each.amount]
+        yield (f"the contract ended on {state.ended}, by its fixings: what is owed until {max(str(each.due) for each in due)} "
+               "is all that it is worth" if due else
+               f"the contract ended on {state.ended}, by its fixings, and nothing is owed any more")
+
+
+def to_deliver(dated: DatedContract, state: State) -> Iterator[str]:
+    """Shares that are certain and not yet delivered."""
+    for each in state.deliveries:
+        if each.due.time >= 0.0:
+            asset = dated.contract.assets[each.asset]
+            unit = "unit" if dated.contract.notional is None else "note"
+            cash = f", and {figure(each.fraction)} of one in cash at the level of {each.day}" if each.fraction else ""
+            yield f"owed on {each.due}: {figure(each.whole)} shares of {asset} for each {unit}{cash}"
+
+
+def state_view(dated: DatedContract, state: State, market: MarketMap) -> StateView:
+    """Everything that the past has settled, for the readback."""
+    contract = dated.contract
+    paid = [each for each in state.payments if not each.owed and each.amount]
+    return StateView(
+        valuation=str(Day(0.0, dated.valuation)),
+        fixings=tuple(_fixings(dated, state)),
+        past=tuple(PastLine(str(each.day), event_label(each.event, contract.payoff), _held(each.held))
+                   for each in state.events if each.event.condition is not None or each.event.name),
+        paid=tuple(Payment(str(each.due), each.pay.leg, each.amount, each.amount * contract.size) for each in paid),
+        owed=owed_amounts(dated, state, market),
+        to_deliver=tuple(to_deliver(dated, state)),
+        accrued=accrued(dated, state),
+        running=tuple(Sentence(name, _values(dated, name, values))
+                      for name, values in (state.terms | state.running).items()),
+        ended=str(state.ended or ""),
+        next=tuple(_next(dated, state)),
+        distances=tuple(distances(dated, state, market)),
+    )
+
+
+def _held(held: bool | None) -> str:
+    return "by today's level" if held is None else "yes" if held else "no"
+
+
+def _fixings(dated: DatedContract, state: State) -> Iterator[Fixed]:
+    """The levels of the past that were read, as they count."""
+    for (day, number), level in sorted(state.fixings.items(), key=lambda item: (item[0][0].time, item[0][1])):
+        yield Fixed(str(day), dated.contract.assets[number], level)
+
+
+def _values(dated: DatedContract, name: str, values: tuple[float, ...]) -> str:
+    """The numbers of a running value or an observed level; flags in words."""
+    running = next((each for each in dated.contract.payoff.running if each.name == name), None)
+    formula = running and (running.start if running.how == "set" else running.formula)
+    flag = formula is not None and formula.kind.is_flag and running.how != "total"
+    shown = [("yes" if value else "no") if flag else figure(value) for value in values]
+    return shown[0] if len(shown) == 1 else ", ".join(
+        f"{asset} {each}" for asset, each in zip(dated.contract.assets, shown, strict=True))
+
+
+def _next(dated: DatedContract, state: State) -> Iterator[Sentence]:
+    """The next date on which something is observed, and the next payment that is possible."""
+    later = [moment for moment in dated.moments if moment.day.time > 0.0] if state.ended is None else []
+    if later:
+        moment = later[0]
+        what = [event_label(each.event, dated.contract.payoff) for each in moment.events]
+        what += [f"{each.running.name} observed" for each in moment.updates]
+        yield Sentence("observation", f"{moment.day}: {', '.join(dict.fromkeys(what))}")
+    due = {each.due for each in state.payments if each.owed and each.amount}
+    due |= {day for moment in later for each in moment.events for pay, day in each.due.items() if isinstance(pay, Pay)}
+    if due:
+        yield Sentence("payment", str(min(due, key=lambda day: day.time)))

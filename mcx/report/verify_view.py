@@ -1,0 +1,180 @@
+"""The terminal view of `mcx verify`."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+from mcx.report.price_view import Scale
+from mcx.report.terminal import Page, decimals, fixed
+from mcx.report.verify_results import NO_EFFECT, NONE_THERE, ImpliedInput, SolvedTerm, VerifyResult, VerifyTable
+
+ANSWERS = {True: "yes", False: "no", None: ""}
+NO_NUMBER = {NONE_THERE: "", NO_EFFECT: "moves nothing"}
+MOST_PAYMENTS = 12  # listed one by one; more are in --json
+IN_PERCENT = ("vol", "yield", "rates", "funding", "correlation")
+
+
+def show_verifications(table: VerifyTable, page: Page) -> None:
+    """Several quotes: how they rank, then each."""
+    page.heading("on one footing, the highest first")
+    scale = Scale(table.quotes[0])
+    page.table(("", "dealer", "bid", "middle", "ask", "gap", "held", "implied funding"), (
+        (str(each.rank), each.dealer, _or_none(each.bid, scale), scale.show(each.mid, 4), _or_none(each.ask, scale),
+         scale.show(each.gap, 4), ANSWERS[each.explained],
+         "" if each.funding is None else f"{1e4 * each.funding:,.1f} ± {1e4 * each.funding_standard_error:,.1f} bp")
+        for each in table.ranking), words=2)
+    for each in table.quotes:
+        page.line()
+        show_verification(each, page)
+
+
+def show_verification(result: VerifyResult, page: Page) -> None:
+    """The verdict first, then what it rests on."""
+    scale = Scale(result)
+    places = scale.places(result.standard_error)
+    quote, gap = result.quote, result.gap
+    page.line(result.verdict, style="bold")
+    page.named((
+        ("contract", f"{result.contract} ({result.payoff})"),
+        ("quote", f"{quote.dealer}, {quote.at}, {quote.side}, {quote.accrual}, {quote.commitment}"),
+        ("on our footing", f"{scale.show(result.mid, places)} {scale.unit}"),
+        ("our price", f"{scale.show(result.price, places)} {scale.unit}, standard error "
+                      f"{scale.show(result.standard_error, places)}; valued on {result.valuation or 'time 0'}"),
+        ("gap", f"{scale.show(gap.price, places)} {scale.unit}, standard error {scale.show(gap.standard_error, places)}, "
+                f"{fixed(gap.value, 2)} {result.currency} (quote less our price)"),
+        ("paths", f"{result.paths:,}, the page in {result.seconds:.1f} s; seed {result.seed}"),
+    ))
+    page.heading("the quote on our footing")
+    page.table(("step", "", "quote"), ((line.step, line.text, _footed(line.quote, line.standard_error, scale, result, number))
+                                       for number, line in enumerate(result.footing)), words=2)
+    page.heading("what may hold the gap, each by itself")
+    page.table(("", "half-width", "holds it"), (
+        (band.name, "not stated" if band.half_width is None else scale.show(band.half_width, places),
+         ANSWERS[band.holds]) for band in result.bands), last=1)
+    corner = result.worst_corner
+    if corner is not None:
+        far = "" if corner.share == 1.0 else f" (at {corner.share:.3g} of them: there is no such market further out)"
+        page.line(f"  worst corner, every input at the end of its half-width{far}: {scale.show(corner.price, places)} {scale.unit}, "
+                  f"which {'reaches' if corner.reaches else 'does not reach'} the quote; never the band")
+    if result.inputs:
+        page.heading("what each input's half-width does to the price")
+        page.table(("input", "", "half-width", scale.unit, "error", ""), (
+            (each.input, each.asset, _move(each.half_width), scale.show(each.change, places),
+             scale.show(each.standard_error, places), each.note) for each in result.inputs), words=2, last=1)
+    page.heading("what would have to be true, each input alone")
+    page.table(("input", "", "value", "error", "move", "inside its doubt"), map(_implied, result.implied), words=2, last=1)
+    _joint(result, page)
+    _readings(result, scale, places, page)
+    _money(result, scale, places, page)
+    if result.solved:
+        page.heading(f"the {result.solved[0].term} at which the contract is worth {scale.show(result.solved[0].target, places)} {scale.unit}")
+        page.items(_solved(each, scale) for each in result.solved)
+    for title, texts in (("warnings", result.warnings), ("assumptions", result.assumptions),
+                         ("not in the model", result.limits), ("read it with care", result.cautions)):
+        if texts:
+            page.heading(title)
+            page.items(texts)
+
+
+def _or_none(number: float | None, scale: Scale) -> str:
+    return "" if number is None else scale.show(number, 4)
+
+
+def _footed(number: float, error: float, scale: Scale, result: VerifyResult, step: int) -> str:
+    """The quote after a step: the first one is still in the quote's own unit."""
+    if step == 0 and result.quote.unit != "percent of notional":
+        return fixed(number, 4)
+    return f"{scale.show(number, 4)}{f' ± {scale.show(error, 4)}' if error else ''}"
+
+
+def _move(share: float) -> str:
+    return f"{100.0 * share:.4g} %"
+
+
+def _implied(each: ImpliedInput) -> tuple[str, ...]:
+    if each.value is None:
+        return each.input, each.asset, "none", "", f"{_signed(each.low)} to {_signed(each.high)}", NO_NUMBER[each.note]
+    if each.input in IN_PERCENT:
+        error, number = 100.0 * each.standard_error, 100.0 * each.value
+        sign = " %"
+    else:
+        error, number, sign = each.standard_error, each.value, ""
+    places = decimals(error, 2, 2)
+    value = f"{fixed(number, places)}{sign}" if each.measure == "level" else _signed(each.value, places)
+    where = f"{value} at {each.tenor}" if each.tenor else value
+    inside = {True: "yes", False: "no", None: "not stated"}[each.plausible]
+    return each.input, each.asset, where, f"{fixed(error, places)}{sign}", _signed(each.move, 2), inside
+
+
+def _signed(move: float, places: int = 1) -> str:
+    return f"{100.0 * move:+,.{places}f} %"
+
+
+def _joint(result: VerifyResult, page: Page) -> None:
+    page.heading("smallest joint move")
+    joint = result.joint
+    if joint is None:
+        page.line("  none found: no uncertainty is stated, or the inputs do not reach the quote together")
+        return
+    page.line(f"  {joint.half_widths:.2f} half-widths in all (root of squares; 1 is the edge of the input band)")
+    page.table(("input", "", "half-widths", "move"), (
+        (each.input, each.asset, f"{each.half_widths:+.2f}", _signed(each.move, 2)) for each in joint.moves), words=2)
+
+
+def _readings(result: VerifyResult, scale: Scale, places: int, page: Page) -> None:
+    page.heading("other readings of the contract")
+    if not result.readings:
+        page.line("  the definition lists none")
+        return
+    shown = [each for each in result.readings if each.price is not None and not each.note]
+    page.table(("reading", scale.unit, "difference", "error", "gap left", "closes it"), (
+        (each.reading, scale.show(each.price, places), scale.show(each.difference, places),
+         scale.show(each.difference_standard_error, places), scale.show(each.left, places), "yes" if each.closes_gap else "")
+        for each in shown), last=1)
+    page.items(f"{each.reading}: {each.about}" for each in shown if each.closes_gap)
+    unlike = [each for each in result.readings if each not in shown]
+    page.items(f"{each.reading}: {each.note}" for each in unlike)
+
+
+def _money(result: VerifyResult, scale: Scale, places: int, page: Page) -> None:
+    money, margin = result.money, result.margin
+    page.heading("where the money is")
+
+    def rows() -> Iterator[tuple[str, str, str]]:
+        yield ("bond floor: certain minimum of all payments",
+               "none" if money.bond_floor is None else scale.show(money.bond_floor, places), "")
+        if money.ceiling is not None:
+            yield "certain maximum of all payments", scale.show(money.ceiling, places), ""
+        for part in money.parts or money.legs:
+            yield part.name, scale.show(part.price, places), scale.show(part.standard_error, places)
+        yield "our price", scale.show(result.price, places), scale.show(result.standard_error, places)
+        if money.funding is not None:
+            yield ("of which the issuer's funding spread", scale.show(money.funding, places),
+                   scale.show(money.funding_standard_error, places))
+        if margin is not None:
+            yield "issue price", scale.show(margin.issue_price, places), ""
+            yield "day-one margin", scale.show(margin.price, places), scale.show(margin.standard_error, places)
+            yield ("  for each year of expected life", scale.show(margin.per_year, places),
+                   scale.show(margin.per_year_standard_error, places))
+
+    page.table(("", scale.unit, "error"), rows())
+    if margin is not None:
+        page.line(f"  the margin is {fixed(margin.value, 2)} {result.currency} for the whole trade, {100.0 * margin.share:.2f} % of "
+                  f"the issue price; expected life {result.expected_life:.2f} years")
+    if 0 < len(money.payments) <= MOST_PAYMENTS:
+        page.table(("payment", "decided", "paid", "least", "most"), (
+            (each.leg, each.decided, each.paid, "none" if each.least is None else scale.show(each.least, 2),
+             "none" if each.most is None else scale.show(each.most, 2)) for each in money.payments), words=3)
+    elif money.payments:
+        page.line(f"  least and most of each of the {len(money.payments)} payments: --json")
+
+
+def _solved(each: SolvedTerm, scale: Scale) -> str:
+    looked = f"looked for from {each.low:.6g} to {each.high:.6g}"
+    if each.value is None:
+        return f"{each.note} ({looked}; stated is {each.stated:.6g})"
+    places = decimals(each.standard_error, 2, 4)
+    slope = scale.show(0.01 * each.slope, 4)
+    along = "; its other numbers move along" if each.together else ""
+    return (f"{fixed(each.value, places)} ± {fixed(each.standard_error, places)} (standard error), stated is {each.stated:.6g}; the price "
+            f"moves by {slope} {scale.unit} for 0.01 of it; {looked}{along}")

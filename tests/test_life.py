@@ -1,0 +1,289 @@
+"""The life of a trade: history by fixings against the same state written in by hand, day by day; continuity through
+observation dates; values of the future, with what was paid, are a martingale over simulated histories."""
+
+from __future__ import annotations
+
+from datetime import date, timedelta
+from math import exp, log, pi, sqrt
+
+import numpy as np
+import pytest
+from helpers import Ready, prepare
+from scipy.special import ndtr
+
+import mcx
+
+SEED, PATHS = 20261201, 4096
+RATE, YIELD, VOL, SPREAD = 0.021, 0.024, 0.2, 0.008
+HEAD = """currency: EUR
+notional: 100
+assets: [harbour]
+start: 2026-12-01
+settlement: 5 business days
+calendar: {holidays: none, roll: following}
+"""
+AUTOCALL = f"""contract: note
+{HEAD}payoff: autocall
+terms:
+  initial: 100
+  observations: {{from: 2027-03-01, until: 2028-12-01, every: 3 months}}
+  first_call: 2027-06-01
+  call_barrier: 102%
+  coupon_barrier: 90%
+  coupon: 2.5%
+  memory: true
+  knock_in: 70%
+  watched: {{from: 2027-03-01, until: 2028-12-01, every: 3 months}}
+  strike: 100%
+---
+"""
+TAIL = f"""contract: tail
+{HEAD}payoff: capital_protection
+terms:
+  initial: 100
+  weights: 100%
+  averaging: [2027-03-01, 2027-06-01, 2027-09-01, 2027-12-01]
+  protection: 90%
+  participation: 100%
+  strike: 95%
+---
+"""
+
+
+def market(today: date, spot: float, fixings: dict[str, float] | None = None, vol: float = VOL) -> str:
+    """A flat market on a day; only fixings up to that day."""
+    known = {day: level for day, level in (fixings or {}).items() if day <= str(today)}
+    lines = ", ".join(f"{day}: {level!r}" for day, level in known.items())
+    return (f"market: {today}\nrates: {{EUR: {RATE:.4%}}}\nfunding: {{EUR: {SPREAD:.4%}}}\n"
+            f"assets: {{harbour: {{spot: {spot!r}, currency: EUR, yield: {YIELD:.4%}, vol: {vol:.8%}}}}}\n"
+            + (f"fixings: {{harbour: {{{lines}}}}}\n" if known else ""))
+
+
+def exact(text: str) -> float:
+    """The price on a seed."""
+    return prepare(text).price(PATHS, SEED).mean
+
+
+# The state written in by hand
+
+HISTORY = {"2027-03-01": 88.4, "2027-06-01": 97.2, "2027-09-01": 84.9, "2027-12-01": 83.1, "2028-03-01": 80.2}
+BY_HAND = """payoff: by_hand
+terms:
+  observations: {type: dates}
+  missed: {type: percent}
+  touched: {type: flag}
+let:
+  performance: spot / 100
+running:
+  hit: {ever: performance < 70%, at: observations}
+  owing: {start: missed}
+events:
+  - at: observations
+    if: performance >= 90%
+    then:
+      - pay: 2.5% + owing
+      - set: {owing: 0}
+    else:
+      - set: {owing: owing + 2.5%}
+  - at: observations
+    if: performance >= 102%
+    then:
+      - pay: 1
+      - end
+  - at: observations.last
+    pay: 1
+  - at: observations.last
+    if: hit or touched
+    then:
+      - pay: min(performance - 1, 0)
+---
+"""
+
+
+def by_hand(today: date, fixings: dict[str, float], touched: bool = False) -> str:
+    """A new contract with the dates that are left and the state that the fixings have made of the old one."""
+    ends = [date(2027, 3, 1), date(2027, 6, 1), date(2027, 9, 1), date(2027, 12, 1), date(2028, 3, 1), date(2028, 6, 1),
+            date(2028, 9, 1), date(2028, 12, 1)]
+    missed = 0.0
+    for day in ends:
+        if day <= today and str(day) in fixings:
+            missed = 0.0 if fixings[str(day)] >= 90 else missed + 0.025
+    left = ", ".join(str(day) for day in ends if day > today)
+    return BY_HAND + (f"contract: new\n{HEAD}payoff: by_hand\nterms:\n  observations: [{left}]\n"
+                      f"  missed: {missed:.4%}\n  touched: {str(touched).lower()}\n---\n".replace(
+                          "start: 2026-12-01", f"start: {today}"))
+
+
+@pytest.mark.parametrize("low", [80.2, 69.5])
+def test_day_by_day_along_a_history_the_value_is_that_of_a_new_contract_with_its_state(low: float):
+    """On the same numbers to the last digits: missed coupons, a touched barrier. The coupon observed on 2027-06-01 is
+    paid five business days later and owed until then."""
+    history = {**HISTORY, "2027-09-01": low}
+    day = date(2027, 3, 2)
+    while day < date(2028, 4, 1):
+        spot = 85.0 + (day.toordinal() * 7919 % 13)
+        found = prepare(AUTOCALL + market(day, spot, history))
+        touched = low < 70 and day >= date(2027, 9, 1)
+        new = exact(by_hand(day, history, touched) + market(day, spot))
+        due = (date(2027, 6, 8) - day).days / 365
+        owed = 0.05 * exp(-(RATE + SPREAD) * due) if date(2027, 6, 1) <= day <= date(2027, 6, 8) else 0.0
+        assert found.price(PATHS, SEED).mean == pytest.approx(new + owed, rel=1e-12), day
+        assert ("owed" in found.names) == bool(owed)
+        day += timedelta(days=9 if abs((day - date(2027, 6, 4)).days) > 9 else 1)
+
+
+def test_averages_so_far():
+    """Fixings of an average against the same numbers written in as an earlier average."""
+    asian = """contract: a
+currency: EUR
+units: 1
+assets: [harbour]
+start: 2026-12-01
+settlement: 5 business days
+calendar: {holidays: none, roll: following}
+payoff: asian
+terms: {side: call, average_type: TYPE, strike_type: fixed, strike: 95, averaging: [AVERAGING], expiry: 2027-12-01MORE}
+---
+"""
+    dates = ("2027-03-01", "2027-06-01", "2027-09-01", "2027-12-01")
+    for kind, mean in (("arithmetic", (88.4 + 97.2) / 2), ("geometric", sqrt(88.4 * 97.2))):
+        today = date(2027, 7, 5)
+        old = asian.replace("TYPE", kind).replace("AVERAGING", ", ".join(dates)).replace("MORE", "")
+        new = asian.replace("TYPE", kind).replace("AVERAGING", ", ".join(dates[2:])).replace(
+            "MORE", f", earlier_average: {mean!r}, earlier_count: 2")
+        assert exact(old + market(today, 96.0, HISTORY)) == pytest.approx(
+            exact(new + market(today, 96.0)), rel=1e-12)
+
+
+# Continuity through each observation date
+
+
+@pytest.mark.parametrize("observed", [date(2027, 3, 1), date(2027, 6, 1), date(2027, 9, 1), date(2027, 12, 1)])
+@pytest.mark.parametrize("contract", [AUTOCALL, TAIL])
+def test_value_is_continuous_through_an_observation(contract: str, observed: date):
+    """Without vol to speak of the level moves by its forward alone: the value the day before, on the day with and
+    without its fixing, and the day after differ by a day's interest, nothing else."""
+    def spot(day: date) -> float:
+        return 97.3 * exp((RATE - YIELD) * (day - date(2026, 12, 1)).days / 365)
+
+    history = {str(day): spot(day) for day in (date(2027, 3, 1), date(2027, 6, 1), date(2027, 9, 1), date(2027, 12, 1))}
+
+    def value(day: date, fixed: bool) -> float:
+        known = {when: level for when, level in history.items() if when < str(day) or (fixed and when == str(day))}
+        return exact(contract + market(day, spot(day), known, vol=1e-8))
+
+    before, after = observed - timedelta(days=1), observed + timedelta(days=1)
+    values = [value(before, True) * exp((RATE + SPREAD) / 365), value(observed, False), value(observed, True),
+              value(after, True) * exp(-(RATE + SPREAD) / 365)]
+    assert values == pytest.approx([values[0]] * 4, rel=1e-9)
+
+
+# A martingale over histories
+
+
+@pytest.mark.parametrize(("contract", "dates"), [
+    (AUTOCALL, ("2027-03-01", "2027-06-01", "2027-09-01")), (TAIL, ("2027-03-01", "2027-06-01", "2027-09-01"))])
+def test_value_and_what_was_paid_is_a_martingale(contract: str, dates: tuple[str, ...]):
+    """Today's value is the mean, over simulated histories up to a later day, of the value then and what was paid
+    until then, both discounted."""
+    start, then = date(2026, 12, 1), date(2027, 9, 20)
+    days = [date.fromisoformat(each) for each in dates]
+    times = [(day - start).days / 365 for day in (*days, then)]
+    normals = np.random.default_rng(7).standard_normal((240, len(times)))
+    steps = np.diff([0.0, *times])
+    logs = np.log(100.0) + np.cumsum((RATE - YIELD - VOL**2 / 2) * steps + VOL * np.sqrt(steps) * normals, axis=1)
+    found = []
+    for number, levels in enumerate(np.exp(logs)):
+        history = dict(zip(dates, map(float, levels), strict=False))
+        ready = prepare(contract + market(then, float(levels[-1]), history))
+        value = ready.price(512, SEED + number).mean * exp(-(RATE + SPREAD) * times[-1])
+        found.append(value + paid_before(ready, start))
+    mean, error = np.mean(found), np.std(found, ddof=1) / sqrt(len(found))
+    today = prepare(contract + market(start, 100.0)).price(1 << 16, SEED)
+    assert abs(mean - today.mean) < 4 * sqrt(error**2 + today.error**2)
+    assert error < 0.015
+
+
+def paid_before(ready: Ready, start: date) -> float:
+    """What a contract has paid before the valuation date, discounted to its start."""
+    return sum(each.amount * exp(-(RATE + SPREAD) * (each.due.date - start).days / 365)
+               for each in ready.unrolled.state.payments if not each.owed)
+
+
+# The end
+
+
+def test_a_called_note_is_worth_what_is_owed_and_then_nothing():
+    """Called on 2027-06-01: the redemption and the coupon until their payment date, that day included; then nothing."""
+    history = {"2027-03-01": 95.0, "2027-06-01": 104.0}
+    for day, owed in ((date(2027, 6, 1), 1.025), (date(2027, 6, 8), 1.025), (date(2027, 6, 9), 0.0),
+                      (date(2028, 12, 24), 0.0)):
+        found = prepare(AUTOCALL + market(day, 77.0, history))
+        due = (date(2027, 6, 8) - day).days / 365
+        assert found.price(64, SEED).mean == pytest.approx(owed * exp(-(RATE + SPREAD) * due), rel=1e-14)
+        assert found.unrolled.grid.assets == ()  # nothing is simulated
+        assert str(found.unrolled.state.ended) == "2027-06-01"
+
+
+def test_after_its_last_payment_a_contract_is_worth_nothing():
+    """All is fixed, all is paid."""
+    found = prepare(TAIL + market(date(2028, 1, 10), 77.0, HISTORY))
+    assert found.price(64, SEED).mean == 0.0
+
+
+# Sensitivities under fixings
+
+
+def lines(folder, text: str, paths: int = 1 << 12) -> dict[tuple[str, str, str], float]:
+    """Every sensitivity by name, asset and tenor."""
+    file = folder / "case.yaml"
+    file.write_text(text)
+    return {(each.name, each.asset, each.tenor): each for each in mcx.greeks(file, paths=paths, seed=SEED).greeks}
+
+
+def test_sensitivities_with_history_are_those_of_a_new_contract_with_its_state(tmp_path):
+    """On the same numbers, likelihood ratios with their controls: fixings are constants to both."""
+    today = date(2027, 10, 4)
+    old = lines(tmp_path, AUTOCALL + market(today, 93.0, HISTORY))
+    new = lines(tmp_path, by_hand(today, HISTORY) + market(today, 93.0))
+    assert old.keys() == new.keys()
+    for key, found in old.items():
+        assert found.value == pytest.approx(new[key].value, rel=1e-9, abs=1e-12), key
+        assert found.standard_error == pytest.approx(new[key].standard_error, rel=1e-9, abs=1e-12), key
+
+
+def test_sensitivities_of_an_average_with_one_fixing_to_come(tmp_path):
+    """It is a fourth of a call: delta, vega, rho and funding by Black's formula."""
+    today, spot = date(2027, 9, 20), 104.0
+    time = (date(2027, 12, 1) - today).days / 365
+    due = (date(2027, 12, 8) - today).days / 365
+    strike = 4 * 95.0 - sum(HISTORY[day] for day in ("2027-03-01", "2027-06-01", "2027-09-01"))
+    forward, df = spot * exp((RATE - YIELD) * time), exp(-(RATE + SPREAD) * due)
+    deviation = VOL * sqrt(time)
+    d1 = log(forward / strike) / deviation + deviation / 2
+    value = df * (forward * ndtr(d1) - strike * ndtr(d1 - deviation)) / 4
+    found = lines(tmp_path, TAIL + market(today, spot, HISTORY), 1 << 17)
+    bond = df * 90
+    by_forward = df * ndtr(d1) / 4
+    for key, truth in {
+        ("delta", "harbour", ""): by_forward * forward / spot,
+        ("vega", "harbour", ""): 0.01 * df * forward * sqrt(time) * exp(-d1 * d1 / 2) / sqrt(2 * pi) / 4,
+        ("rho", "EUR", ""): 1e-4 * (by_forward * forward * time - due * (value + bond)),
+        ("funding", "EUR", ""): -1e-4 * due * (value + bond),
+    }.items():
+        assert abs(found[key].value - truth) < 4 * found[key].standard_error + 1e-12, key
+        assert found[key].standard_error < 0.02 * abs(truth), key
+
+
+def test_locked_returns_of_a_cliquet():
+    """Returns of the past are locked by fixings: the same with the levels written into one payment."""
+    head = AUTOCALL.split("payoff:")[0].replace("note", "c")
+    own = ("payoff: locked\nterms: {resets: {type: dates}}\nrunning:\n  returns:\n    total: \"clip(spot / "
+           "previous(spot, 100) - 1, -2%, 3%)\"\n    at: resets\nevents:\n  - {at: resets.last, pay: \"max(returns, 0)\"}\n---\n")
+    old = own + head + "payoff: locked\nterms: {resets: [2027-03-01, 2027-06-01, 2027-09-01]}\n---\n"
+    today = date(2027, 7, 1)
+    locked = sum(min(max(each, -0.02), 0.03) for each in (88.4 / 100 - 1, 97.2 / 88.4 - 1))
+    new = own.replace("locked", "fresh").replace("previous(spot, 100)", "97.2").replace(
+        "max(returns, 0)", f"max(returns + ({locked!r}), 0)") + head.replace("start: 2026-12-01", f"start: {today}") + (
+        "payoff: fresh\nterms: {resets: [2027-09-01]}\n---\n")
+    assert exact(old + market(today, 96.0, HISTORY)) == pytest.approx(exact(new + market(today, 96.0)), rel=1e-12)
