@@ -167,6 +167,7 @@ def verify(
     threads: int | None = None,
     reduction: str = "none",
     record: File | None = None,
+    report: File | None = None,
     progress: Progress | None = None,
     notice: Callable[[str], None] | None = None,
 ) -> VerifyResult | VerifyTable:
@@ -192,6 +193,10 @@ def verify(
         from mcx.report.record import check_free
 
         check_free(record)
+    if report is not None:
+        from mcx.report.page.render import check_writable
+
+        check_writable(report)
     made, dated = _dated(files, with_market=True, with_quote=True)
     for each in made.contracts:
         check_fits(asked, notional=each.notional is not None, title=each.title)
@@ -201,6 +206,8 @@ def verify(
         from mcx.report.record import make_record, write_record
 
         write_record(record, make_record(_sources(made), [each.to_dict() for each in results], "verify"))
+    if report is not None:
+        _write_report(report, "verify", files, made, dated, results)
     if count == 1:
         return results[0]
     from mcx.report.verify_summary import verify_table
@@ -472,8 +479,11 @@ def _write_report(
     from mcx.report.repeat import command
     from mcx.report.scene import scene
 
-    prepared = zip(_ready(made, dated[:len(results)]), results, strict=True)
-    scenes = [scene(ready, _sources(made), command(verb, files, result)) for ready, result in prepared]
+    wanted = {result.contract for result in results}
+    ready = {each.dated.contract.title: each
+             for each in _ready(made, [each for each in dated if each.contract.title in wanted])}
+    sources = _sources(made)
+    scenes = [scene(ready[result.contract], sources, command(verb, files, result)) for result in results]
     write_page(file, page(f"mcx {verb}", results, scenes))
 
 

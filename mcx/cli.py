@@ -153,6 +153,7 @@ def greeks(files: tuple[str, ...], as_json: bool, ladder: bool, grid: bool, spot
 @sampling
 @AS_JSON
 @click.option("--record", type=click.Path(), help="Write a valuation record to this new file.")
+@REPORT
 def verify(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
     """Can the dealer's quote be right? The gap, what holds it, and what would have to be true."""
     from mcx import api

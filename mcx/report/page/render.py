@@ -11,12 +11,14 @@ from mcx.report.greek_results import GreeksResult, GreeksTable
 from mcx.report.page.blocks import Sheet
 from mcx.report.page.greeks_sheet import greeks_sheet
 from mcx.report.page.price_sheet import price_sheet
+from mcx.report.page.verify_sheet import verify_sheet
 from mcx.report.results import PriceResult, PriceTable, Result
 from mcx.report.scene import Scene
+from mcx.report.verify_results import VerifyResult, VerifyTable
 
 FOOTER = ("An estimate on the inputs shown and the user's reading of the terms, to be reviewed by a licensed "
           "professional under local rules; not advice and not an offer.")
-SHEETS = {PriceResult: price_sheet, GreeksResult: greeks_sheet}
+SHEETS = {PriceResult: price_sheet, GreeksResult: greeks_sheet, VerifyResult: verify_sheet}
 
 
 def page(title: str, results: Sequence[Result], scenes: Sequence[Scene]) -> str:
@@ -27,7 +29,7 @@ def page(title: str, results: Sequence[Result], scenes: Sequence[Scene]) -> str:
 
 def piece(result: Result) -> str | None:
     """What a notebook shows of a result: its sheet, or those of a table's contracts; None where it has none."""
-    results = {PriceTable: "prices", GreeksTable: "contracts"}.get(type(result))
+    results = {PriceTable: "prices", GreeksTable: "contracts", VerifyTable: "quotes"}.get(type(result))
     found = getattr(result, results) if results else (result,)
     if any(type(each) not in SHEETS for each in found):
         return None

@@ -138,3 +138,29 @@ def _frame(title: str, said: str, times: Sequence[float], numbers: Sequence[floa
     canvas.along([(x(time), words) for time, words in ticks if first <= time <= last], HEIGHT - BOTTOM, LEFT,
                  WIDTH - right)
     return canvas, x, y
+
+
+def gap_ladder(title: str, said: str, gap: Bar, bands: Sequence[tuple[str, float, str]]) -> str:
+    """A gap as a bar from 0 with its error, its end drawn down through bands around 0 (name, half-width, holds it)."""
+    rows = 1 + len(bands)
+    left = 18 + LETTER * max(len(name) for name in (gap.name, *(band[0] for band in bands)))
+    right = 18 + LETTER * max(len(words) for words in (gap.shown, *(band[2] for band in bands)))
+    step = 24
+    canvas = Canvas(WIDTH, 34 + step * rows, title, said)
+    ends = [gap.value - Z95 * gap.error, gap.value + Z95 * gap.error]
+    x = scale([*ends, *(sign * half for _, half, _ in bands for sign in (-1, 1))], left, WIDTH - right, zero=True)
+    foot = canvas.height - BOTTOM + 4
+    for number, (name, half, holds) in enumerate(bands, start=1):
+        y = 4 + step * (number + 0.5)
+        canvas.text(left - 8, y + 4, name, "end")
+        canvas.whisker(x(-half), x(half), y, y)
+        canvas.text(WIDTH - 4, y + 4, holds, "end")
+    y = 4 + step * 0.5
+    canvas.text(left - 8, y + 4, gap.name, "end")
+    canvas.bar(x(0.0), x(gap.value), y, 12)
+    canvas.whisker(x(ends[0]), x(ends[1]), y, y)
+    canvas.text(WIDTH - 4, y + 4, gap.shown, "end")
+    canvas.segment(x(0.0), 4, x(0.0), foot, "axis")
+    canvas.line([(x(gap.value), y), (x(gap.value), foot)], 1)
+    canvas.along([(x(tick), written(tick)) for tick in x.ticks(6)], foot, left, WIDTH - right)
+    return canvas.svg()
