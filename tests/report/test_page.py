@@ -39,6 +39,7 @@ assets:
   harbour: {spot: 100, currency: EUR, yield: 1.5%, vol: {value: 22%, uncertain: 1%, source: broker}}
 """
 PATHS = ("--paths", 4096)
+VERBS = {"price": (NOTE, (), 0), "greeks": (NOTE, ("--ladder",), 0), "verify": (EXAMPLES / "quoted_note.yaml", (), 1)}
 
 
 class Tags(HTMLParser):
@@ -59,15 +60,15 @@ class Tags(HTMLParser):
 
 @pytest.fixture(scope="module")
 def pages(tmp_path_factory: pytest.TempPathFactory) -> dict[str, Path]:
-    """A page of each verb about a note of two assets."""
+    """A page of each verb; the quote cannot be explained."""
     folder = tmp_path_factory.mktemp("pages")
-    files = {verb: folder / f"{verb}.html" for verb in ("price", "greeks")}
-    for verb, more in (("price", ()), ("greeks", ("--ladder",))):
-        assert mcx(verb, NOTE, *PATHS, *more, "--report", files[verb]).code == 0
+    files = {verb: folder / f"{verb}.html" for verb in VERBS}
+    for verb, (note, more, code) in VERBS.items():
+        assert mcx(verb, note, *PATHS, *more, "--report", files[verb]).code == code
     return files
 
 
-@pytest.mark.parametrize("verb", ["price", "greeks"])
+@pytest.mark.parametrize("verb", VERBS)
 def test_a_page_asks_nothing_of_a_network(pages: dict[str, Path], verb: str):
     """No script, no link that loads, no address at all outside a namespace."""
     text = pages[verb].read_text(encoding="utf-8")
@@ -80,11 +81,11 @@ def test_a_page_asks_nothing_of_a_network(pages: dict[str, Path], verb: str):
     assert "url(" not in text and "@import" not in text
 
 
-@pytest.mark.parametrize("verb", ["price", "greeks"])
+@pytest.mark.parametrize("verb", VERBS)
 def test_every_picture_has_its_words(pages: dict[str, Path], verb: str):
     """Each is an image with a name, whose description says numbers."""
     found = re.findall(r"<svg.*?</svg>", pages[verb].read_text(encoding="utf-8"), re.DOTALL)
-    assert len(found) >= 6
+    assert len(found) >= 4
     for text in found:
         picture = ElementTree.fromstring(text)
         assert picture.get("role") == "img"
@@ -232,10 +233,11 @@ def printed(page: Path, folder: Path) -> tuple[int, list[str]]:
 
 
 @pytest.mark.skipif(BROWSER is None, reason="no browser is installed that runs without a screen")
-@pytest.mark.parametrize("verb", ["price", "greeks"])
+@pytest.mark.parametrize("verb", VERBS)
 def test_in_a_browser(pages: dict[str, Path], verb: str, tmp_path: Path):
-    """A page prints to two pages and tries nothing that its own policy forbids: no request, no script."""
-    assert printed(pages[verb], tmp_path) == (2, [])
+    """A page prints to two pages at most and tries nothing that its own policy forbids: no request, no script."""
+    count, said = printed(pages[verb], tmp_path)
+    assert 1 <= count <= 2 and not said
 
 
 @pytest.mark.skipif(BROWSER is None, reason="no browser is installed that runs without a screen")

@@ -9,7 +9,7 @@ from hypothesis import given
 from hypothesis import strategies as some
 
 from mcx.report.pictures.canvas import ROW, Canvas, Scale, scale
-from mcx.report.pictures.draw import WIDTH, Bar, Fan, Series, bars, curve, fan, intervals, lines
+from mcx.report.pictures.draw import WIDTH, Bar, Fan, Series, bars, curve, fan, gap_ladder, intervals, lines
 
 SVG = "{http://www.w3.org/2000/svg}"
 NUMBERS = some.floats(-1e12, 1e12, allow_subnormal=False)
@@ -65,6 +65,16 @@ def test_whiskers_reach_95_percent():
     assert spans[0] == pytest.approx(2 * spans[1], abs=0.03)
     dots = [float(node.get("cx")) for node in picture.iter(f"{SVG}circle")]
     assert spans[1] / (dots[1] - dots[0]) == pytest.approx(2 * 1.96, rel=2e-3)
+
+
+def test_a_gap_stands_beside_its_bands():
+    """The dashed line of the gap runs through a band that holds it, and beside one that does not."""
+    bands = [("wide", 0.8, "yes"), ("small", 0.2, "no")]
+    picture = read(gap_ladder("gap", "-0.5", Bar("gap", -0.5, 0.01, "-0.5"), bands))
+    end = float(picture.find(f"{SVG}polyline").get("points").split(",")[0])
+    spans = [(float(node.get("x1")), float(node.get("x2"))) for node in picture.iter(f"{SVG}line")
+             if node.get("class") == "error" and node.get("y1") == node.get("y2")]
+    assert [low < end < high for low, high in spans] == [True, False, True]  # the bands, then the gap's own error
 
 
 def test_lines_differ_without_colour():
