@@ -16,7 +16,7 @@ from dataclasses import replace
 from mcx.checked.load import checked_request
 from mcx.dates.dating import date_contract
 from mcx.estimators.nets import Net, Order, clock, net_draws, on_net
-from mcx.estimators.price import Ready, prepare
+from mcx.estimators.ready import Ready, prepare
 from mcx.machine.draw_plan import PLAIN
 from mcx.machine.run import run
 from mcx.text.documents import parse_documents

@@ -23,24 +23,16 @@ if TYPE_CHECKING:
     from mcx.checked.market import Market
     from mcx.estimators.greeks import Wish
     from mcx.estimators.plan import Precision
-    from mcx.estimators.price import Ready
+    from mcx.estimators.ready import Ready
     from mcx.report.greek_results import GreeksResult, GreeksTable
-    from mcx.report.results import (
-        CalendarView,
-        Definition,
-        Library,
-        PriceResult,
-        PriceTable,
-        Readback,
-        ReadbackTable,
-        Replay,
-        Result,
-    )
+    from mcx.report.method_results import MethodsResult, MethodsTable
+    from mcx.report.results import Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay, Result
+    from mcx.report.state_results import CalendarView
     from mcx.report.verify_results import VerifyResult, VerifyTable
 
 File = str | Path
 Progress = Callable[[int, int, float], None]  # paths done, paths planned, standard error so far (unit of the price)
-REDUCTIONS = ("none",)
+METHOD_SECONDS = 1.0  # for each choice of methods, where nothing is asked
 LARGEST_SEED = (1 << 64) - 1
 CONTRACT_BEGINS = "a document that begins 'contract: TITLE'"
 QUOTE_BEGINS = "a document that begins 'quote: DEALER'"
@@ -64,16 +56,18 @@ def price(
 
     At most one of `paths`, `within` (a 95 % half-width: '2bp' or '0.02%' of the notional, '0.01' money per unit) and
     `seconds` decides the number of paths; without any it is 2^20. `seed` None is 1. `threads` None takes all; it
-    changes no digit. `record` names a file to write a valuation record to, `report` one for a page of HTML. `notice` is
-    called with a sentence when kernels must be compiled, or a run will take long. Raises InputError, RequestError,
-    Refusal.
+    changes no digit. `reduction` lists methods of variance reduction, parted by commas ('antithetic,controls'), or is
+    'none', or 'auto' for the choice of a short pilot. `record` names a file to write a valuation record to, `report`
+    one for a page of HTML. `notice` is called with a sentence when kernels must be compiled, or a run will take long.
+    Raises InputError, RequestError, Refusal.
     """
     from mcx.estimators.plan import DEFAULT_SEED, check_fits, precision
+    from mcx.estimators.reduction.names import wished
 
     asked = precision(paths, within, seconds)
     seed = DEFAULT_SEED if seed is None else _seed(seed)
     threads = _threads(threads)
-    _reduction(reduction)
+    methods = wished(reduction)
     if record is not None:
         from mcx.report.record import check_free
 
@@ -85,7 +79,8 @@ def price(
     made, dated = _dated(files, with_market=True)
     for each in made.contracts:
         check_fits(asked, notional=each.notional is not None, title=each.title)
-    table = _price(made, dated, [asked] * len(dated), [seed] * len(dated), threads, progress, notice)
+    every = len(dated)
+    table = _price(made, dated, [asked] * every, [seed] * every, [methods] * every, threads, progress, notice)
     if record is not None and not table.interrupted:
         from mcx.report.record import make_record, write_record
 
@@ -215,6 +210,50 @@ def verify(
     return verify_table(results)
 
 
+def methods(
+    *files: File,
+    paths: int | None = None,
+    seconds: float | None = None,
+    seed: int | None = None,
+    threads: int | None = None,
+    picture: File | None = None,
+    notice: Callable[[str], None] | None = None,
+) -> MethodsResult | MethodsTable:
+    """Which variance reduction pays on every contract in the files: one result, or a table of several.
+
+    Every choice of methods that applies runs for `seconds` (1 without), or for `paths`. `picture` names a file, .png or
+    .svg, to draw the error against time in, for one contract. Raises InputError, RequestError, Refusal.
+    """
+    from mcx.estimators.plan import DEFAULT_SEED, precision
+
+    asked = precision(paths, None, seconds if paths is not None or seconds is not None else METHOD_SECONDS)
+    seed = DEFAULT_SEED if seed is None else _seed(seed)
+    threads = _threads(threads)
+    if picture is not None:
+        from mcx.report.picture import check_picture
+
+        check_picture(picture)
+    made, dated = _dated(files, with_market=True)
+    if picture is not None and len(dated) > 1:
+        raise RequestError(f"a picture shows one contract; the files hold {len(dated)}")
+    from mcx.estimators.finite import finite
+    from mcx.estimators.reduction.comparison import compare
+    from mcx.estimators.reduction.scheme import Case
+    from mcx.report.method_results import MethodsTable
+    from mcx.report.method_summary import methods_result
+
+    results = []
+    for ready in _ready(made, dated):
+        with finite(ready):
+            found, refused = compare(Case(ready, seed, threads, notice), asked.seconds, asked.paths)
+        results.append(methods_result(ready, found, refused, seed, asked.words))
+    if picture is not None:
+        from mcx.report.picture import draw_methods
+
+        draw_methods(results[0], picture)
+    return results[0] if len(results) == 1 else MethodsTable(tuple(results))
+
+
 def readback(*files: File, path: File | None = None, calendar: bool = False) -> Readback | ReadbackTable | CalendarView:
     """What every contract in the files says, in sentences and dates; with a market also what that says on the dates,
     and what has become of the contract by its valuation date.
@@ -262,7 +301,7 @@ def definition(name: str) -> Definition:
 
 
 def blank(name: str, assets: Sequence[str]) -> str:
-    """Contract and market to fill in for a definition, as YAML text; raises RequestError for what does not fit."""
+    """Contract, market and quote to fill in for a definition, as YAML; raises RequestError for what does not fit."""
     from mcx.checked.values import ASSET
     from mcx.report.blank import blank as fill_in
 
@@ -302,6 +341,7 @@ def replay(
 ) -> Replay:
     """Whether a valuation record reproduces from the texts in it; raises RequestError for what is no whole record."""
     from mcx.estimators.plan import precision
+    from mcx.estimators.reduction.names import NONE, wished
     from mcx.report.record import compare, documents_of, environment, read_record
 
     threads = _threads(threads)
@@ -326,7 +366,8 @@ def replay(
         wishes = [wish_of(*(each[key] for key in keys)) for each in runs]
         results = _whole(_greeks(made, dated, wishes, asked, seeds, threads, progress, notice)).contracts
     else:
-        results = _whole(_price(made, dated, asked, seeds, threads, progress, notice)).prices
+        reductions = [wished(each.get("reduction", NONE)) for each in runs]
+        results = _whole(_price(made, dated, asked, seeds, reductions, threads, progress, notice)).prices
     return compare(stored, [each.to_dict() for each in results], environment())
 
 
@@ -345,7 +386,8 @@ def _dated(files: Sequence[File], *, with_market: bool, with_quote: bool = False
     made, faults = checked_request(documents, unread)
     kinds = {document.kind for document in made.documents}
     names = ", ".join(map(str, files))
-    missing = [("contract", CONTRACT_BEGINS), ("market", MARKET_BEGINS), ("quote", QUOTE_BEGINS)][: 1 + with_market + with_quote]
+    wanted = [("contract", CONTRACT_BEGINS), ("market", MARKET_BEGINS), ("quote", QUOTE_BEGINS)]
+    missing = wanted[: 1 + with_market + with_quote]
     for kind, begins in missing:
         if kind not in kinds and not unread:  # else it may stand in what could not be read
             faults.append(Fault(Place(str(files[0]), 1, 1), f"no {kind} in {names}; expected {begins}"))
@@ -409,6 +451,7 @@ def _price(
     dated: Sequence[DatedContract],
     asked: Sequence[Precision],
     seeds: Sequence[int],
+    reductions: Sequence[tuple[str, ...]],
     threads: int | None,
     progress: Progress | None,
     notice: Callable[[str], None] | None,
@@ -420,10 +463,11 @@ def _price(
     from mcx.report.summary import price_result
 
     results = []
-    for ready, wish, seed in zip(_ready(made, dated), asked, seeds, strict=True):
+    for ready, wish, seed, reduction in zip(_ready(made, dated), asked, seeds, reductions, strict=True):
         try:
             with finite(ready):
-                valuation = value(ready, wish, seed=seed, threads=threads, progress=progress, notice=notice)
+                valuation = value(ready, wish, seed=seed, reduction=reduction, threads=threads, progress=progress,
+                                  notice=notice)
         except KeyboardInterrupt:
             if not results:
                 raise
@@ -518,7 +562,7 @@ def _verify(
 
 def _ready(made: Request, dated: Sequence[DatedContract]) -> list[Ready]:
     """Every contract as a program on the market; raises InputError with all that the tape refuses."""
-    from mcx.estimators.price import prepare
+    from mcx.estimators.ready import prepare
 
     found = [prepare(each, made.market) for each in dated]
     faults = [fault for _, wrong in found for fault in wrong]
@@ -583,6 +627,8 @@ def _threads(threads: object) -> int | None:
 
 
 def _reduction(reduction: str) -> None:
-    if reduction not in REDUCTIONS:
-        raise RequestError(f"the variance reduction '{reduction}' is not known to this version; it knows 'none', "
-                           f"others come with a later version")
+    from mcx.estimators.reduction.names import wished
+
+    if wished(reduction):
+        raise RequestError(f"the variance reduction of sensitivities is 'none', not {reduction!r}: their estimators choose "
+                           f"their own controls")

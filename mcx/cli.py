@@ -49,7 +49,7 @@ class Whole(click.ParamType):
 def sampling(command: Callable) -> Callable:
     """The options that mean the same on every command that draws paths."""
     for option in (
-        click.option("--reduction", default="none", help="Variance reduction.  [none]"),
+        click.option("--reduction", default="none", metavar="A,B,…", help="Variance reduction: none, auto, or methods.  [none]"),
         THREADS,
         click.option("--seed", type=int, help="Seed of the random numbers.  [1]"),
         click.option("--seconds", type=float, help="As many paths as this time allows, by a pilot run."),
@@ -148,14 +148,31 @@ def greeks(files: tuple[str, ...], as_json: bool, ladder: bool, grid: bool, spot
 
 @cli.command()
 @FILES
-@click.option("--solve", default="", metavar="TERM", help="At which value of this term is the contract worth the quote?")
+@click.option("--paths", type=int, help="Paths for each choice, in place of a time.")
+@click.option("--seconds", type=float, help="Time for each choice.  [1]")
+@click.option("--seed", type=int, help="Seed of the random numbers.  [1]")
+@THREADS
+@AS_JSON
+@click.option("--picture", type=click.Path(), metavar="FILE", help="Draw error against time, as .png or .svg.")
+def methods(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
+    """Which variance reduction pays? Every choice that applies, each for the same time."""
+    from mcx import api
+
+    with _progress() as (_, notice):
+        result = api.methods(*files, notice=notice, **wishes)
+    _show(result, as_json, _methods_view)
+
+
+@cli.command()
+@FILES
+@click.option("--solve", default="", metavar="TERM", help="At which value of this term is it worth the quote?")
 @click.option("--target", metavar="PRICE", help="Solve for this price instead: 99.5%, or money per unit.")
 @sampling
 @AS_JSON
 @click.option("--record", type=click.Path(), help="Write a valuation record to this new file.")
 @REPORT
 def verify(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
-    """Can the dealer's quote be right? The gap, what holds it, and what would have to be true."""
+    """Can the dealer's quote be right? What would explain the gap?"""
     from mcx import api
 
     with _progress() as (progress, notice):
@@ -179,7 +196,7 @@ def readback(files: tuple[str, ...], path: str | None, calendar: bool, as_json: 
 
 @cli.command()
 @click.argument("name", required=False)
-@click.option("--blank", is_flag=True, help="Contract and market to fill in.")
+@click.option("--blank", is_flag=True, help="Contract, market and quote to fill in.")
 @click.option("--assets", metavar="A,B", help="The assets to write into them.")
 @click.option("--schema", is_flag=True, help="JSON schema for editors: contracts on NAME, or on any definition.")
 @AS_JSON
@@ -313,6 +330,16 @@ def _verify_view(result: Result, page: Page) -> None:
     from mcx.report.verify_view import show_verification, show_verifications
 
     (show_verifications if isinstance(result, VerifyTable) else show_verification)(result, page)
+
+
+def _methods_view(result: Result, page: Page) -> None:
+    from mcx.report.method_results import MethodsTable
+    from mcx.report.method_view import show_methods
+
+    for number, each in enumerate(result.contracts if isinstance(result, MethodsTable) else (result,)):
+        if number:
+            page.line()
+        show_methods(each, page)
 
 
 def _readback_view(result: Result, page: Page) -> None:

@@ -239,6 +239,6 @@ def two_asset_digital(cash: float, spot_1: float, spot_2: float, strike_1: float
 
 def forward_start(kind: str, spot: float, strike_ratio: float, start: float, maturity: float, rate: float,
                   dividend_yield: float, vol: float) -> float:
-    """Option whose strike is set at `start` to a multiple of the spot then (Rubinstein, Pay now, choose later, 1990)."""
+    """Option whose strike is set at `start` to a multiple of the spot then (Rubinstein 1990, Pay now, choose later)."""
     later = european(kind, 1.0, strike_ratio, maturity - start, rate, dividend_yield, vol)
     return spot * exp(-dividend_yield * start) * later

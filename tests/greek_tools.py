@@ -8,7 +8,7 @@ from helpers import Estimate, request_of
 from mcx.dates.dating import date_on
 from mcx.estimators.greeks import Found, Wish, sensitivities
 from mcx.estimators.plan import Precision
-from mcx.estimators.price import Ready, prepare
+from mcx.estimators.ready import Ready, prepare
 
 Key = tuple[str, str, str]  # name, asset or pair or currency, tenor
 

@@ -64,7 +64,7 @@ def test_numpy_integers_are_numbers(call: Path):
 
 @pytest.mark.parametrize("wishes", [
     {"paths": 1.5}, {"paths": True}, {"within": []}, {"seconds": "1"}, {"seed": 1.0}, {"seed": True}, {"seed": -1},
-    {"threads": 0}, {"threads": True}, {"threads": 1.0}, {"reduction": "antithetic"}, {"reduction": None},
+    {"threads": 0}, {"threads": True}, {"threads": 1.0}, {"reduction": "antithetic,antithetic"}, {"reduction": None}, {"reduction": "none,antithetic"},
     {"paths": 10, "within": "1bp"}, {"record": "none/there.json"}])
 def test_wrong_requests(call: Path, wishes: dict):
     """A RequestError with a sentence, before anything is read or drawn."""

@@ -13,7 +13,7 @@ from mcx.checked.load import Request, load
 from mcx.dates.dating import date_on
 from mcx.estimators.greeks import Wish, sensitivities
 from mcx.estimators.plan import Precision
-from mcx.estimators.price import prepare
+from mcx.estimators.ready import prepare
 from mcx.estimators.sensitivities import ALL
 
 EXAMPLES = sorted((Path(__file__).resolve().parent.parent / "payoffs" / "examples").glob("*.yaml"))

@@ -128,11 +128,14 @@ def test_the_fixing_of_the_valuation_date_may_be_in_or_not():
         todays = {key: level for key, level in LEVELS.items() if key[1] < "2027-09-01" or key[0] in assets}
         found = prepare(WORST_OF + market("2027-09-01") + fixings(todays))
         texts.append(found.dated.assumptions[-1].split("valuation date, uses ")[1])
-        levels = [LEVELS[name, "2027-09-01"] if name in assets else spot for name, spot in (("harbour", 92), ("lantern", 47))]
+        levels = [LEVELS[name, "2027-09-01"] if name in assets else spot
+                  for name, spot in (("harbour", 92), ("lantern", 47))]
         held = found.estimates(64, SEED)["condition: coupon paid @ 2027-09-01"].mean
         assert held == (min(levels[0] / 100, levels[1] / 50) >= 0.8)
-    assert texts == ["the market's spot", "that day's fixing of harbour and the market's spot of lantern, not fixed yet",
-                     "that day's fixing of lantern and the market's spot of harbour, not fixed yet", "that day's fixing"]
+    assert texts == ["the market's spot",
+                     "that day's fixing of harbour and the market's spot of lantern, not fixed yet",
+                     "that day's fixing of lantern and the market's spot of harbour, not fixed yet",
+                     "that day's fixing"]
 
 
 def test_a_composite_level_needs_the_rate_of_its_day(tmp_path: Path):
@@ -159,7 +162,8 @@ start: 2026-12-01
 settlement: 0 business days
 calendar: {holidays: none, roll: following}
 HAPPENEDpayoff: touch
-terms: {kind: one touch, direction: down, barrier: 80, cash: 10, watched: {continuous: [2026-12-01, 2027-12-01]}, expiry: 2027-12-01}
+terms: {kind: one touch, direction: down, barrier: 80, cash: 10, watched: {continuous: [2026-12-01, 2027-12-01]},
+        expiry: 2027-12-01}
 ---
 market: TODAY
 rates: {EUR: 2%}
@@ -168,7 +172,8 @@ assets: {harbour: {spot: 92, currency: EUR, yield: 1%, vol: 20%}}
 
 
 def touch(happened: str, today: str = "2027-06-01", more: str = "") -> str:
-    return TOUCH.replace("HAPPENED", f"happened: {{touched: {happened}}}\n" if happened else "").replace("TODAY", today) + more
+    stated = f"happened: {{touched: {happened}}}\n" if happened else ""
+    return TOUCH.replace("HAPPENED", stated).replace("TODAY", today) + more
 
 
 @pytest.mark.parametrize("happened", ["{2027-06-01: false}", "{2027-05-31: false}", "{2027-08-02: false}",
@@ -191,8 +196,8 @@ def test_touched_already(happened: str, more: str):
 
 
 @pytest.mark.parametrize(("happened", "more", "said"), [
-    ("", "", "'touched' is watched all the time from 2026-12-01, which fixings cannot tell; the contract must say what had "
-             "happened by 2027-05-31 or 2027-06-01, as 'happened: {touched: {2027-06-01: false}}'"),
+    ("", "", "'touched' is watched all the time from 2026-12-01, which fixings cannot tell; the contract must say "
+             "what had happened by 2027-05-31 or 2027-06-01, as 'happened: {touched: {2027-06-01: false}}'"),
     ("{2027-05-28: false}", "", "must say what had happened by 2027-05-31"),
     ("{2027-06-02: true}", "", "must say what had happened by 2027-05-31"),
     ("{2027-06-01: false}", "fixings: {harbour: {2027-03-04: 79.5}}\n",
@@ -211,8 +216,8 @@ def test_an_extreme_so_far(tmp_path: Path):
     where it is not."""
     text = touch("").replace("payoff: touch\nterms: {kind: one touch, direction: down, barrier: 80, cash: 10, ",
                              "HAPPENEDpayoff: lowest\nterms: {").replace("watched: {c", "watched: {c")
-    text = ("payoff: lowest\nterms: {watched: {type: watch}, expiry: {type: date}}\nrunning:\n  low: {lowest: spot, at: "
-            "watched}\nevents:\n  - {at: expiry, pay: low}\n---\n" + text)
+    text = ("payoff: lowest\nterms: {watched: {type: watch}, expiry: {type: date}}\nrunning:\n  low: {lowest: spot, "
+            "at: watched}\nevents:\n  - {at: expiry, pay: low}\n---\n" + text)
     for level, more, so_far in ((70.5, "", 70.5), (70.5, "fixings: {harbour: {2027-06-01: 66}}\n", 66.0)):
         found = text.replace("HAPPENED", f"happened: {{low: {{2027-05-31: {level}}}}}\n") + more
         price = prepare(found).estimates(1 << 12, SEED)["price"].mean * exp(0.02 * 183 / 365)
@@ -244,8 +249,9 @@ def test_a_disrupted_day_takes_another_level():
 
 def test_an_observation_may_be_moved_beyond_the_valuation_date():
     """It is then simulated on its new day, though its own day is past."""
-    text = (WORST_OF + market("2027-09-01") + fixings({key: level for key, level in LEVELS.items() if key[1] < "2027-09"})
-            ).replace("payoff:", "disruption: {lantern: {2027-09-01: 2027-10-01}, harbour: {2027-09-01: 90}}\npayoff:", 1)
+    early = {key: level for key, level in LEVELS.items() if key[1] < "2027-09"}
+    text = (WORST_OF + market("2027-09-01") + fixings(early)).replace(
+        "payoff:", "disruption: {lantern: {2027-09-01: 2027-10-01}, harbour: {2027-09-01: 90}}\npayoff:", 1)
     found = prepare(text)
     held = found.estimates(1 << 14, SEED)["condition: coupon paid @ 2027-09-01"]
     time = 30 / 365
@@ -277,7 +283,8 @@ def test_a_split_changes_nothing():
 def test_a_split_of_a_watched_asset():
     """The extreme of a continuous watch counts by the factor as well."""
     plain = touch("{2027-06-01: false}")
-    split = plain.replace("spot: 92", "spot: 46").replace("payoff:", "adjustments: {harbour: {2027-05-03: 2}}\npayoff:", 1)
+    split = plain.replace("spot: 92", "spot: 46").replace(
+        "payoff:", "adjustments: {harbour: {2027-05-03: 2}}\npayoff:", 1)
     assert prepare(split).price(4096, SEED).mean == pytest.approx(prepare(plain).price(4096, SEED).mean, rel=1e-12)
 
 
@@ -291,8 +298,10 @@ def test_a_split_of_a_watched_asset():
     ("{highest: [2027-03-01, 2027-09-01]}", {"harbour": 97.5, "lantern": 48.5})])
 def test_an_initial_level_that_was_fixed(how: str, level: dict[str, float]):
     """The fixing, or the average, lowest or highest of several, is as good as the number written in."""
-    text = WORST_OF.replace("from: 2027-03-01", "from: 2027-12-01").replace("first_call: 2027-06-01", "first_call: 2028-03-01")
-    written_in = text.replace("{harbour: 100, lantern: 50}", f"{{harbour: {level['harbour']}, lantern: {level['lantern']}}}")
+    text = WORST_OF.replace("from: 2027-03-01", "from: 2027-12-01").replace(
+        "first_call: 2027-06-01", "first_call: 2028-03-01")
+    written_in = text.replace("{harbour: 100, lantern: 50}",
+                              f"{{harbour: {level['harbour']}, lantern: {level['lantern']}}}")
     fixed = text.replace("{harbour: 100, lantern: 50}", how)
     assert prepare(fixed + market() + fixings(LEVELS)).price(4096, SEED).mean == pytest.approx(
         prepare(written_in + market()).price(4096, SEED).mean, rel=1e-12)
@@ -335,7 +344,8 @@ day_count: 30/360
 settlement: 5 business days
 calendar: {holidays: none, roll: following}
 payoff: NAME
-terms: {initial: 100, strike: 100%, coupon: 12%, coupon_dates: {from: 2027-03-01, until: 2027-12-01, every: 3 months}, final: 2027-11-24, maturity: coupon_dates.last}
+terms: {initial: 100, strike: 100%, coupon: 12%, coupon_dates: {from: 2027-03-01, until: 2027-12-01, every: 3 months},
+        final: 2027-11-24, maturity: coupon_dates.last}
 ---
 market: TODAY
 rates: {EUR: 2%}
@@ -417,8 +427,10 @@ def test_state(tmp_path: Path):
     assert [(each.name, each.text) for each in state.running] == [("missed", "0")]
     assert [each.text for each in state.next] == ["2027-12-01: coupon paid, called", "2027-09-03"]
     assert {(each.what, each.asset): (each.level, pytest.approx(each.distance)) for each in state.distances} == {
-        ("coupon paid", "harbour"): (pytest.approx(80), 80 / 92 - 1), ("coupon paid", "lantern"): (pytest.approx(40), 40 / 47 - 1),
-        ("called", "harbour"): (pytest.approx(100), 100 / 92 - 1), ("called", "lantern"): (pytest.approx(50), 50 / 47 - 1),
+        ("coupon paid", "harbour"): (pytest.approx(80), 80 / 92 - 1),
+        ("coupon paid", "lantern"): (pytest.approx(40), 40 / 47 - 1),
+        ("called", "harbour"): (pytest.approx(100), 100 / 92 - 1),
+        ("called", "lantern"): (pytest.approx(50), 50 / 47 - 1),
         ("hit", "harbour"): (pytest.approx(60), 60 / 92 - 1), ("hit", "lantern"): (pytest.approx(30), 30 / 47 - 1)}
     shown = mcx("readback", tmp_path / "case.yaml").out
     assert "state on 2027-09-02" in shown and "distance of today's levels" in shown
@@ -460,3 +472,20 @@ def test_what_changes_nothing_is_refused(tmp_path: Path, stated: str, said: str)
     """A statement that nothing reads is a slip."""
     found = faults(tmp_path, WORST_OF.replace("payoff:", f"{stated}\npayoff:", 1) + market() + fixings(LEVELS))
     assert len(found) == 1 and said in found[0], found
+
+
+def test_what_must_be_stated_and_what_must_be_fixed_is_told_at_once(tmp_path: Path):
+    """A payment that hangs on a watch does not hide the fixings that it needs as well; of a watch that is read on
+    several past days the last one is named."""
+    text = ("payoff: both\nterms: {watched: {type: watch}, seen: {type: dates}}\nrunning:\n  hit: {ever: spot < 80, "
+            "at: watched}\nevents:\n  - {at: seen, if: hit, then: [pay: spot]}\n  - {at: seen.last, pay: spot}\n---\n"
+            + touch("").replace("payoff: touch", "payoff: both"))
+    start = text.index("terms: {kind")
+    text = (text[:start] + "terms: {watched: {continuous: [2026-12-01, 2027-12-01]}, seen: [2027-03-01, 2027-05-03, "
+            "2027-12-01]}\n" + text[text.index("---\nmarket"):]).replace("settlement: 0", "settlement: 250")
+    found = faults(tmp_path, text.replace("if: hit, then: [pay: spot]", "if: hit or spot < 85, then: [pay: spot]"))
+    assert len(found) == 2
+    assert any("needs a fixing of 'harbour' on 2027-03-01 and 2027-05-03" in each for each in found)
+    assert any("must say what had happened by 2027-05-31 or 2027-06-01" in each for each in found)
+    path = written(tmp_path, "harbour: {2027-03-01: 90, 2027-05-03: 88, 2027-12-01: 95}\n", "path.yaml")
+    refused(mcx("readback", written(tmp_path, text), "--path", path), "must say what had happened by 2027-05-31")

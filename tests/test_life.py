@@ -279,7 +279,8 @@ def test_locked_returns_of_a_cliquet():
     """Returns of the past are locked by fixings: the same with the levels written into one payment."""
     head = AUTOCALL.split("payoff:")[0].replace("note", "c")
     own = ("payoff: locked\nterms: {resets: {type: dates}}\nrunning:\n  returns:\n    total: \"clip(spot / "
-           "previous(spot, 100) - 1, -2%, 3%)\"\n    at: resets\nevents:\n  - {at: resets.last, pay: \"max(returns, 0)\"}\n---\n")
+           "previous(spot, 100) - 1, -2%, 3%)\"\n    at: resets\nevents:\n  - {at: resets.last, pay: \"max(returns, "
+           "0)\"}\n---\n")
     old = own + head + "payoff: locked\nterms: {resets: [2027-03-01, 2027-06-01, 2027-09-01]}\n---\n"
     today = date(2027, 7, 1)
     locked = sum(min(max(each, -0.02), 0.03) for each in (88.4 / 100 - 1, 97.2 / 88.4 - 1))
@@ -287,3 +288,49 @@ def test_locked_returns_of_a_cliquet():
         "max(returns, 0)", f"max(returns + ({locked!r}), 0)") + head.replace("start: 2026-12-01", f"start: {today}") + (
         "payoff: fresh\nterms: {resets: [2027-09-01]}\n---\n")
     assert exact(old + market(today, 96.0, HISTORY)) == pytest.approx(exact(new + market(today, 96.0)), rel=1e-12)
+
+
+@pytest.mark.parametrize(("day", "owed"), [(date(2027, 6, 3), 102.5), (date(2027, 7, 1), 0.0)])
+def test_sensitivities_of_a_note_that_was_called(tmp_path, day: date, owed: float):
+    """What is owed hangs on rates and funding alone; what is worth nothing on nothing."""
+    history = {"2027-03-01": 95.0, "2027-06-01": 104.0}
+    found = lines(tmp_path, AUTOCALL + market(day, 77.0, history))
+    due = (date(2027, 6, 8) - day).days / 365
+    by_rate = -1e-4 * due * owed * exp(-(RATE + SPREAD) * due)
+    for key, value in found.items():
+        truth = by_rate if key[0] in ("rho", "funding") else 0.0
+        if key[0] != "theta":
+            assert value.value == pytest.approx(truth, rel=1e-9, abs=1e-12), key
+    assert ("delta", "harbour", "") in found
+
+
+ABROAD = {
+    "quanto": "dividends: [{ex: 2027-11-10, cash: 2.5}, {ex: 2028-05-10, cash: 2.5}], "
+              "quanto: {fx_vol: 9%, fx_correlation: -20%, fx: EUR per USD}",
+    "composite": "dividends: [{ex: 2027-11-10, cash: 2.5}, {ex: 2028-05-10, share: 2%}]",
+}
+
+
+@pytest.mark.parametrize("how", ABROAD)
+def test_history_under_cash_dividends_and_other_currencies(tmp_path, how: str):
+    """Price and sensitivities are those of the new contract with its state there as well. With a rate of exchange of 1
+    on every past day a composite level has the same history."""
+    today = date(2027, 10, 4)
+
+    def abroad(text: str) -> str:
+        text = text.replace(f"currency: EUR, yield: {YIELD:.4%}", f"currency: USD, {ABROAD[how]}")
+        text = text.replace(f"rates: {{EUR: {RATE:.4%}}}", f"rates: {{EUR: {RATE:.4%}, USD: 4%}}")
+        if how == "composite":
+            rates = ", ".join(f"{day}: 1" for day in HISTORY)
+            text = text.replace("payoff: autocall", "conversion: {harbour: composite}\npayoff: autocall").replace(
+                "payoff: by_hand\nterms:\n  observations: [", "conversion: {harbour: composite}\npayoff: by_hand\n"
+                "terms:\n  observations: [").replace("fixings: {", f"fixings: {{EUR per USD: {{{rates}}}, ")
+            text += "fx: {EUR per USD: {spot: 1.02, vol: 8%}}\ncorrelation: {harbour/EUR per USD: 30%}\n"
+        return text
+
+    old, new = abroad(AUTOCALL + market(today, 93.0, HISTORY)), abroad(by_hand(today, HISTORY) + market(today, 93.0))
+    assert exact(old) == pytest.approx(exact(new), rel=1e-12)
+    found, other = lines(tmp_path, old), lines(tmp_path, new)
+    assert found.keys() == other.keys() and len(found) > 5
+    for key, each in found.items():
+        assert each.value == pytest.approx(other[key].value, rel=1e-9, abs=1e-12), key

@@ -19,7 +19,7 @@ from scipy.special import ndtr
 from mcx.checked.market import Market
 import mcx
 from mcx.dates.dating import date_contract
-from mcx.estimators.price import prepare as ready_to_price
+from mcx.estimators.ready import prepare as ready_to_price
 from mcx.leaves.market_map import MarketMap
 
 PATHS, SEED = 2**22, 0x428A2F98D728AE22

@@ -24,7 +24,8 @@ COMMITMENTS = ("firm", "indicative")
 REQUIRED = ("quote", "at", "side", "unit", "accrual", "commitment")
 KEYS = ("for", "price", "bid", "ask", "bid_offer", "accrued", "denomination", "spot", "size", "fees", "issue_price",
         "tolerance", "source")
-MOMENT = re.compile(r"([0-9]{4}-[0-9]{2}-[0-9]{2})(?: ([01][0-9]|2[0-3]):[0-5][0-9](?: [A-Z]{2,5}| [+-][0-9]{2}:[0-9]{2})?)?")
+ZONE = r" [A-Z]{2,5}| [+-][0-9]{2}:[0-9]{2}"
+MOMENT = re.compile(rf"([0-9]{{4}}-[0-9]{{2}}-[0-9]{{2}})(?: (?:[01][0-9]|2[0-3]):[0-5][0-9](?:{ZONE})?)?")
 TEXTBOOK = "0y"
 
 
@@ -70,7 +71,9 @@ class DealerQuote:
         return self.bid_offer if self.bid is None else self.ask - self.bid
 
 
-def read_quote(document: Document, contracts: Iterable[tuple[str, Contract | None]]) -> tuple[DealerQuote | None, list[Fault]]:
+def read_quote(
+    document: Document, contracts: Iterable[tuple[str, Contract | None]]
+) -> tuple[DealerQuote | None, list[Fault]]:
     """The quote that a document says, None where something in it is wrong; and what is wrong. `contracts` are all that
     stand in the files, by title, None where one could not be read."""
     faults: list[Fault] = []
@@ -83,9 +86,10 @@ def read_quote(document: Document, contracts: Iterable[tuple[str, Contract | Non
     side = one_of(body.get("side"), SIDES, faults, "a side") if "side" in body else None
     at = read(body, "at", _moment, faults)
     words = {key: one_of(body.get(key), known_words, faults, what) for key, known_words, what in
-             (("accrual", ACCRUALS, "how coupons accrued are counted"), ("commitment", COMMITMENTS, "how binding it is"))
+             (("accrual", ACCRUALS, "how accrued coupons count"), ("commitment", COMMITMENTS, "how binding it is"))
              if key in body}
-    parse, own = (percent if unit == PERCENT else _money), (percent if contract is None or contract.notional else _money)
+    parse = percent if unit == PERCENT else _money
+    own = percent if contract is None or contract.notional is not None else _money
     prices = {key: read(body, key, parse, faults) for key in ("price", "bid", "ask", "bid_offer", "accrued", "fees")}
     others = {key: read(body, key, own, faults) for key in ("issue_price", "tolerance")}
     amounts = {key: read(body, key, amount, faults) for key in ("denomination", "size")}
@@ -96,8 +100,10 @@ def read_quote(document: Document, contracts: Iterable[tuple[str, Contract | Non
     if faults:
         return None, faults
     day = "" if at == TEXTBOOK else at[:10]
-    return DealerQuote(who, body.get("quote").place, at, day, side, unit, words["accrual"] == "clean",
-                       words["commitment"] == "firm", spot=spot, about=about, source=source, **prices, **others, **amounts), faults
+    quote = DealerQuote(
+        who, body.get("quote").place, at, day, side, unit, words["accrual"] == "clean", words["commitment"] == "firm",
+        spot=spot, about=about, source=source, **prices, **others, **amounts)
+    return quote, faults
 
 
 def _about(body: Mapping, contracts: dict[str, Contract | None], faults: list[Fault]) -> str:
@@ -105,8 +111,8 @@ def _about(body: Mapping, contracts: dict[str, Contract | None], faults: list[Fa
     stated = read(body, "for", word, faults)
     if stated is None:
         if len(contracts) > 1 and "for" not in body:
-            faults.append(Fault(body.place, f"the files hold {len(contracts)} contracts; say which one the quote is for, as "
-                                            f"'for: {next(iter(contracts))}'"))
+            faults.append(Fault(body.place, f"the files hold {len(contracts)} contracts; say which one the quote is "
+                                            f"for, as 'for: {next(iter(contracts))}'"))
         return next(iter(contracts), "")
     if contracts and stated not in contracts:
         near = did_you_mean(stated, contracts) or f"; there is {listed(contracts)}"
@@ -184,7 +190,7 @@ def _together(body: Mapping, side: str | None, unit: str | None, accrual: str | 
     if side == "mid":
         spare("fees", "a mid: fees are taken off a bid or put on an ask; say which side this is")
     if accrual == "clean":
-        needs("accrued", "a clean price leaves it out; state it in the unit of the price, '0%' where nothing has accrued")
+        needs("accrued", "a clean price leaves it out; state it in the unit of the price, '0%' where there is none")
     elif accrual == "dirty":
         spare("accrued", "a dirty price, which holds it already")
     if unit == PER_DENOMINATION:

@@ -9,7 +9,7 @@ names.
 from __future__ import annotations
 
 import datetime
-from collections.abc import Iterable, Mapping as MappingOf
+from collections.abc import Iterable
 from pathlib import Path
 
 from mcx.checked.reading import offered
@@ -83,7 +83,7 @@ class _Reader:
             self.faults.append(Fault(Place(table.file, 1, 1), "expected a first line 'date,' and names of assets, as "
                                                               f"'date,{','.join(self.names)}'"))
             return
-        columns: MappingOf[str, int] = {}
+        columns: dict[str, int] = {}
         for number, name in enumerate(head[1:], start=1):
             if name.text in columns:
                 self.faults.append(Fault(name.place, f"a second column of '{name.text}'"))

@@ -134,7 +134,8 @@ def _quotes(
         if quote is None:
             continue
         if market is not None and (quote.at == TEXTBOOK) != (market.valuation is None):
-            wanted = "a date, as the market is of one" if market.valuation else f"'{TEXTBOOK}', as the market is of time 0"
+            wanted = f"'{TEXTBOOK}', as the market is of time 0"
+            wanted = "a date, as the market is of one" if market.valuation else wanted
             faults.append(Fault(document.body.get("at").place, f"expected {wanted}, found '{quote.at}'"))
         found.append(quote)
     return tuple(found), faults

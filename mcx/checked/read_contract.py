@@ -37,8 +37,8 @@ from mcx.faults import Fault, did_you_mean
 from mcx.text.located import Document, Mapping, Node, Scalar, Sequence
 from mcx.text.scalars import date, expected, period, shortened, word
 
-KEYS = ("contract", "currency", "notional", "units", "denomination", "assets", "start", "day_count", "settlement", "calendar",
-        "payment_calendar", "conversion", "payoff", "terms", "happened", "disruption", "adjustments")
+KEYS = ("contract", "currency", "notional", "units", "denomination", "assets", "start", "day_count", "settlement",
+        "calendar", "payment_calendar", "conversion", "payoff", "terms", "happened", "disruption", "adjustments")
 REQUIRED = ("contract", "currency", "assets", "payoff", "terms")
 CALENDAR_KEYS = ("start", "day_count", "settlement", "calendar", "payment_calendar")  # not for textbook contracts
 LATER = ("rounding",)
@@ -82,7 +82,8 @@ def read_contract(
         day_count=day_count or "", settlement=settlement, calendar=calendar, payment_calendar=payment_calendar,
         textbook=textbook, conversion=conversion, happened=read_happened(body.get("happened"), payoff, faults),
         disruption=read_disruption(body.get("disruption"), assets, faults),
-        adjustments=read_adjustments(body.get("adjustments"), assets, faults), text=document.text, terms_place=(terms or body).place,
+        adjustments=read_adjustments(body.get("adjustments"), assets, faults), text=document.text,
+        terms_place=(terms or body).place,
         at_fault=reader.at_fault,
         framed=not frame and (textbook or (start and settlement and calendar) is not None),
     )

@@ -79,8 +79,8 @@ class DatedContract:
     """Moments in order of time, and the continuous watches beside them.
 
     `schedules` gives the days of every date, dates and (dated) watch term. `calendar_version` names the holiday
-    package and its version, '' where no holidays were asked for. `assumptions` are sentences to print with any value. `history` is
-    what is known of its past.
+    package and its version, '' where no holidays were asked for. `assumptions` are sentences to print with any value,
+    `warnings` are about what looks like a slip. `history` is what is known of its past.
     """
 
     contract: Contract
@@ -91,6 +91,7 @@ class DatedContract:
     watches: tuple[Watch, ...]
     calendar_version: str = ""
     assumptions: tuple[str, ...] = ()
+    warnings: tuple[str, ...] = ()
     history: History = NO_HISTORY
 
     @property

@@ -112,6 +112,7 @@ class _Dating:
         self.positions = _positions(contract, schedules)
         self.faults: list[Fault] = []
         self.assumptions: list[str] = list(terms.notes)
+        self.warnings: list[str] = []
         self.updates: dict[Day, list[Update]] = {}
         self.events: dict[Day, list[DatedEvent]] = {}
         self.watches: list[Watch] = []
@@ -136,7 +137,7 @@ class _Dating:
             watches=tuple(self.watches), calendar_version=self._calendar_version(),
             assumptions=(*self.contract.assumptions, *dict.fromkeys(self.assumptions),
                          *said(self.contract, self.history)),
-            history=replace(self.history, eve=self._eve()))
+            warnings=tuple(dict.fromkeys(self.warnings)), history=replace(self.history, eve=self._eve()))
         live, faults = readings(dated)
         faults += self.faults
         return (None if faults else _only(dated, live)), faults
@@ -154,8 +155,8 @@ class _Dating:
         for name, dates in self.contract.happened.items():
             for known in dates.values():
                 if name not in watched:
-                    self._fault(known.place, f"'{name}' is not watched all the time in this contract: what happened follows "
-                                             "from its fixings")
+                    self._fault(known.place, f"'{name}' is not watched all the time in this contract: what happened "
+                                             "follows from its fixings")
 
     def _can_be_read(self) -> bool:
         """Whether all that decides which formulas are read is known: every term but numbers that must be stated."""
@@ -237,7 +238,7 @@ class _Dating:
             dates = f"'{event.at.name}.{event.at.part}'" if event.at.part else f"'{event.at.name}'"
             dates += f" from '{event.since}'" if event.since else ""
             dates += f" until '{event.until}'" if event.until else ""
-            self.assumptions.append(f"'{event.name or 'the payment'}' never happens: no date of {dates}")
+            self.warnings.append(f"'{event.name or 'the payment'}' never happens: no date of {dates}")
         pays = [action for action in (*event.then, *event.otherwise) if isinstance(action, Pay)]
         for occasion in occasions:
             due = {pay: self._due(pay, occasion) for pay in pays}

@@ -25,7 +25,8 @@ class History:
 
     `levels` are levels as they count, of the valuation date and before; `moved` the day whose level counts for an
     observation of a disrupted day; `scale` the factor on simulated levels (empty: none has one); `names` what a level
-    needs of the market (the asset, and its rate of exchange); `sound` is whether all fixings could be read; `place` where fixings stand or would stand.
+    needs of the market (the asset, and its rate of exchange); `sound` is whether all fixings could be read;
+    `place` where they stand or would stand.
     """
 
     levels: Mapping[tuple[int, datetime.date], float] = field(default_factory=dict)
@@ -106,11 +107,11 @@ def _not_past(contract: Contract, today: datetime.date) -> list[Fault]:
         for date, known in dates.items():
             if isinstance(known.value, datetime.date):
                 if known.value <= date:
-                    faults.append(Fault(known.place, f"the observation of '{asset}' on {date} is moved to {known.value}; "
-                                                     "expected a later date"))
+                    text = f"the observation of '{asset}' on {date} is moved to {known.value}; expected a later date"
+                    faults.append(Fault(known.place, text))
             elif date > today:
-                faults.append(Fault(known.place, f"the level of '{asset}' on {date} is stated, but that date lies after "
-                                                 f"the valuation date {today}"))
+                text = f"the level of '{asset}' on {date} is stated, which lies after the valuation date {today}"
+                faults.append(Fault(known.place, text))
     return faults
 
 
@@ -128,5 +129,6 @@ def said(contract: Contract, history: History) -> list[str]:
     for asset, dates in contract.disruption.items():
         for date, known in dates.items():
             what = f"the level of {known.value}" if isinstance(known.value, datetime.date) else f"{known.value:.12g}"
-            found.append(f"the observation of {asset} on {date} takes {what} (disrupted day); payments keep their dates")
+            found.append(f"the observation of {asset} on {date} takes {what} (disrupted day); payments keep their "
+                         "dates")
     return found

@@ -38,8 +38,11 @@ class Corner:
     share: float
 
 
-def effects(revaluer: Revaluer, market: Market, levers: Sequence[Lever], sampling: Sampling, base: Batches) -> tuple[Effect, ...]:
-    """The effect of every lever of which some half-width is stated and not 0. `base` is the price as the market stands."""
+def effects(
+    revaluer: Revaluer, market: Market, levers: Sequence[Lever], sampling: Sampling, base: Batches
+) -> tuple[Effect, ...]:
+    """The effect of every lever of which some half-width is stated and not 0. `base` is the price as the market
+    stands."""
     return tuple(_effect(revaluer, market, lever, sampling, base) for lever in levers if any(lever.doubt(1.0).values()))
 
 

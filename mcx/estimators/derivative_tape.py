@@ -20,7 +20,7 @@ from itertools import accumulate, combinations_with_replacement
 from mcx.tape.adjoint import Gradient, finished, of_the_market, on_paths, sums_of, sweep
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
-from mcx.tape.program import LeafKind, Sum, Tape, spot_leaf
+from mcx.tape.program import Instruction, LeafKind, Sum, Tape, spot_leaf
 from mcx.tape.scores import BRIDGES, Scores, latest_steps, scores
 from mcx.tape.steps import Grid
 
@@ -62,7 +62,7 @@ class DerivativeTape:
 
 def derivative_tape(
     tape: Tape, grid: Grid, assets: int, known: Sequence[float | None], *, pathwise: Sequence[int],
-    likelihood: Sequence[int], second: bool, proxy: int | None = None,
+    likelihood: Sequence[int], second: bool, proxy: int | None = None, levels: bool = False,
 ) -> DerivativeTape:
     """From a tape whose only output is the price and two lists that share out its payments.
 
@@ -70,8 +70,9 @@ def derivative_tape(
     second   whether second derivatives are taken
     proxy    a smooth value that stands for the payments taken by likelihood ratio: it is differentiated in both ways,
              and the difference is a control
+    levels   whether likelihood ratios hold levels, escrowed dividends included, and not only their logs
     """
-    making = _Making(tape, grid, known, pathwise, likelihood, proxy)
+    making = _Making(tape, grid, known, pathwise, likelihood, proxy, levels)
     if likelihood:
         making.by_likelihood()
     pairs = pairs_of(assets) if second else []
@@ -92,8 +93,8 @@ class _Making:
     """The sums of a derivative tape under construction."""
 
     def __init__(self, tape: Tape, grid: Grid, known: Sequence[float | None], pathwise: Sequence[int],
-                 likelihood: Sequence[int], proxy: int | None):
-        self.tape, self.grid, self.likelihood, self.proxy = tape, grid, likelihood, proxy
+                 likelihood: Sequence[int], proxy: int | None, levels: bool):
+        self.tape, self.grid, self.likelihood, self.proxy, self.levels = tape, grid, likelihood, proxy, levels
         self.builder = Builder.of(tape)
         self.later = _later(self.builder, tape, grid, likelihood)
         self.running = _running(self.builder, tape, grid, likelihood, self.later)
@@ -102,14 +103,15 @@ class _Making:
         self.derived, self.controls, self.extra = list(sums_of(self.smooth)), [], []
         self.by_score, self.by_path = [], []  # of the stand-in
         last = max(self.later, default=min(1, len(grid.times) - 1))
-        self.law: Scores = scores(self.builder, tape, grid, known, last)
+        self.law: Scores = scores(self.builder, tape, grid, known, last, levels=levels)
         self.slopes = _by_log_spots(self.builder, tape, self.smooth, self.law.spots) if self.smooth else {}
         self.proxy_slopes: dict[int, int] = {}
 
     def by_likelihood(self) -> None:
         """First derivatives of the payments that jump, with their controls."""
         builder, later = self.builder, self.later
-        held = {number for number, step in enumerate(self.tape.instructions) if step.op in (Op.STEP, *BRIDGES)}
+        held = {number for number, step in enumerate(self.tape.instructions)
+                if step.op in (Op.STEP, *BRIDGES) or self.levels and _is_escrow(step)}
         self.derived += sums_of(sweep(builder, _counted(builder, self.likelihood), of_the_market, held))
         for score in self.law.first:
             if score.step in later:
@@ -138,7 +140,7 @@ class _Making:
                                  for part in parts]
         held = {step: proxy if flag is None else emit(Op.MUL, proxy, flag) for step, flag in self.running.items()}
         self.by_score += [Sum(held[score.step], score.value, builder.leaf(score.leaf)) for score in self.law.first
-                          if score.step in held]
+                          if score.step in held and score.leaf.kind is not LeafKind.ESCROW]  # it is made of logs
         for edge in self.law.edges if 1 in held else ():
             self.by_score.append(Sum(proxy, edge.weight, builder.leaf(spot_leaf(self.tape.leaves, edge.asset))))
         self.proxy_slopes = _by_log_spots(builder, self.tape, gradient, self.law.spots)
@@ -182,6 +184,10 @@ class _Making:
                 there = replaced(self.builder, value, edge.extreme, edge.start)
                 found += [Sum(there, edge.weight), Sum(edge.weight)]
         return found
+
+
+def _is_escrow(step: Instruction) -> bool:
+    return step.op is Op.LEAF and step.payload.kind is LeafKind.ESCROW
 
 
 def _counted(builder: Builder, values: Iterable[int]) -> dict[int, int]:

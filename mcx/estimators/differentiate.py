@@ -7,6 +7,7 @@ the Jacobian of the market's map. Scores have mean zero, so their sums are contr
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -21,7 +22,7 @@ from mcx.leaves.jacobian import inputs, jacobian
 from mcx.leaves.market_map import MarketMap
 from mcx.machine.sizes import cost
 from mcx.tape.adjoint import leaf_sums
-from mcx.tape.program import Program
+from mcx.tape.program import LeafKind, Program
 from mcx.tape.registers import lower
 
 CONTROLS = 6  # of a second derivative: two scores, the second-order one, that of its delta, both deltas' difference,
@@ -105,13 +106,16 @@ class Differentiator:
         return Derivatives(sums.paths, first, control, second, controls, sums.means[:, -1:], price)
 
     def _second(self, sums: np.ndarray, first: np.ndarray, control: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-        """Second derivatives by the spots out of those by their logs, and the controls of them."""
+        """Second derivatives by the spots out of those by their logs, and the controls of them. The log is that of the
+        spot without the cash dividends that are escrowed, which stay where they are when the spot moves."""
         made, numbers = self.made, inputs(self.market, self.contract)
+        logs = {leaf.asset: value for leaf, value in zip(made.tape.leaves, self.values, strict=True)
+                if leaf.kind is LeafKind.LOG_SPOT}
         spots = [column for column, number in enumerate(numbers) if number.kind == "spot"]
         second = np.zeros((len(sums), len(made.crossed)))
         controls = np.zeros((*second.shape, CONTROLS))
         for pair, (one, other) in enumerate(pairs_of(len(spots))[: len(made.crossed)]):
-            levels = numbers[spots[one]].value, numbers[spots[other]].value
+            levels = [math.exp(logs[k]) if k in logs else numbers[spots[k]].value for k in (one, other)]
             for side, parts in enumerate(made.crossed[pair]):
                 second[:, pair] += 0.5 * sums[:, parts[0::2]].sum(axis=1)
                 controls[:, pair, side] = sums[:, parts[1::2]].sum(axis=1)

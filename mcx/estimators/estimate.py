@@ -46,9 +46,11 @@ class Estimate:
         return replace(self, value=self.value * factor, standard_error=self.standard_error * abs(factor))
 
 
-def estimates(paths: int, means: Sequence[float], squares: Sequence[float]) -> tuple[Estimate, ...]:
-    """Estimates from means and centred sums of squares, both of shape (outputs,); `paths` is at least 2."""
-    scale = paths * (paths - 1)
+def estimates(paths: int, means: Sequence[float], squares: Sequence[float], batch: int = 1) -> tuple[Estimate, ...]:
+    """Estimates from means and centred sums of squares, both of shape (outputs,), over at least two batches; `batch`:
+    how many paths are one independent draw, the squares then those of the batches' means, each counted `batch` times.
+    """
+    scale = paths * (paths // batch - 1)
     return tuple(
         Estimate(float(mean), math.sqrt(max(float(square), 0.0) / scale), paths)
         for mean, square in zip(means, squares, strict=True)

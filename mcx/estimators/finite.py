@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 from contextlib import contextmanager
 
-from mcx.estimators.price import Ready
+from mcx.estimators.ready import Ready
 from mcx.faults import Refusal
 from mcx.machine.run import NonFinitePath, NonFiniteSum
 

@@ -25,8 +25,8 @@ class FootingStep:
 
 @dataclass(frozen=True, slots=True)
 class Footing:
-    """A quote in the unit of the contract's price, dirty, at our spot, without fees. `mid` is what is compared; `bid` and
-    `ask` are None where the quote does not tell them. `at_reference` is the same at the reference spot."""
+    """A quote in the unit of the contract's price, dirty, at our spot, without fees. `mid` is what is compared; `bid`
+    and `ask` are None where the quote does not tell them. `at_reference` is the same at the reference spot."""
 
     steps: tuple[FootingStep, ...]
     mid: float
@@ -77,8 +77,8 @@ def _steps(quote: DealerQuote, contract: Contract, moved_by: Estimate, factor: f
     elif quote.side == "mid":
         yield step("side", 0.0, "a mid, as it stands")
     elif quote.bid_offer is None:
-        yield step("side", 0.0, f"{'a bid' if quote.side == 'bid' else 'an ask'}, compared as it stands: the bid-offer was not said, "
-                                f"so the dealer's mid is not known")
+        yield step("side", 0.0, f"{'a bid' if quote.side == 'bid' else 'an ask'}, compared as it stands: the bid-offer "
+                                f"was not said, so the dealer's mid is not known")
     else:
         half = 0.5 * quote.bid_offer
         yield step("side", half if quote.side == "bid" else -half,
@@ -90,7 +90,8 @@ def _steps(quote: DealerQuote, contract: Contract, moved_by: Estimate, factor: f
              CASH: f"from money for {amount:,.15g} {contract.currency + ' notional' if contract.notional else 'units'}"}
     yield step("unit", 0.0, words.get(quote.unit, f"{contract.currency} per unit, as we price"))
     accrued = (quote.accrued or 0.0) * factor
-    yield step("accrued coupon", accrued, "clean: what has accrued is put on top" if quote.clean else "dirty, as we price")
+    yield step("accrued coupon", accrued,
+               "clean: what has accrued is put on top" if quote.clean else "dirty, as we price")
     yield step("spot", moved_by.value, _spot_words(quote, contract), moved_by.standard_error)
     fees = (quote.fees or 0.0) * factor
     change = {"bid": fees, "ask": -fees}.get(quote.side, 0.0)

@@ -22,8 +22,8 @@ from mcx.estimators.estimate import Estimate
 from mcx.estimators.ladder import Point, Step, grid, ladder, spot_shifts, today, turning
 from mcx.estimators.methods import PATHWISE, Method, methods
 from mcx.estimators.pace import announce, pace
-from mcx.estimators.plan import Plan, Precision, plan
-from mcx.estimators.price import Ready
+from mcx.estimators.plan import Independent, Plan, Precision, plan
+from mcx.estimators.ready import Ready
 from mcx.estimators.revalue import (
     IN_PROPORTION,
     RATES,
@@ -147,7 +147,8 @@ class _Run:
                 points += self._grid(base)
             except KeyboardInterrupt:
                 self.interrupted = True
-        self.notes += [*between(self.ready.dated), *self._near(values), *self._turning()]
+        self.notes += [*between(self.ready.dated, self.ready.unrolled.state), *self._near(values), *self._turning(),
+                       *self._unmoved()]
         return Found(price, tuple(values), tuple(self.refused), tuple(comparison), tuple(self.choices),
                      self.methods.jumps, tuple(rungs), tuple(points), tuple(self.notes), self.plan, self.sampling.seed,
                      time.perf_counter() - begun, self.interrupted)
@@ -160,9 +161,9 @@ class _Run:
     def _plan(self, asked: Precision) -> Plan:
         program = replace(self.ready.program, outputs=self.ready.program.outputs[:1])
 
-        def prices(paths: int) -> np.ndarray:
-            return values_by_path(program, paths=paths, seed=self.pilot.seed, stream=Stream.PILOT,
-                                  threads=self.pilot.threads)[0]
+        def prices(paths: int) -> Independent:
+            return Independent(values_by_path(program, paths=paths, seed=self.pilot.seed, stream=Stream.PILOT,
+                                              threads=self.pilot.threads)[0])
 
         def seconds_for(paths: int) -> float:
             begun = time.perf_counter()
@@ -264,6 +265,12 @@ class _Run:
             yield (f"the first simulated date is only {_so_many(365.0 * first[0], 'day')} away: the error of a "
                    f"likelihood ratio's delta grows as the root of that time shrinks, that of its gamma as the time "
                    f"itself does; a ladder of spot moves says more")
+
+    def _unmoved(self) -> Iterator[str]:
+        """A word about numbers of the market that the value hangs on and that have no line."""
+        for name, how in self.contract.conversion.items():
+            numbers = "spot, vol and correlation" if how == "composite" else "vol and correlation"
+            yield f"no sensitivities by the rate of exchange of {name} ({how}): its {numbers} stand where they are"
 
     def _turning(self) -> Iterator[str]:
         """A word about conditions on today's levels that a small move of the spots turns."""

@@ -1,7 +1,8 @@
 """What can be moved to meet a quote: each input alone, all of a kind together, with what the market says of its doubt.
 
-The nodes of one curve move together, by a sum (forwards and spots by a share). A half-width under `uncertainty` is that of
-every curve of its kind, independent from one asset to the next; `uncertain` beside a number takes its place there.
+The nodes of one curve move together, by a sum (forwards and spots by a share). A half-width under `uncertainty` is
+that of every curve of its kind, independent from one asset to the next; `uncertain` beside a number takes its place
+there.
 """
 
 from __future__ import annotations
@@ -70,7 +71,8 @@ def _unit(number: Input) -> float:
 
 def levers(market: Market, contract: Contract) -> tuple[Lever, ...]:
     """Each input of the contract alone, by kind; where several assets or pairs have one, first all of them together."""
-    found = {key: list(nodes) for key, nodes in groupby(inputs(market, contract), key=lambda each: (each.kind, each.subject))}
+    by_curve = groupby(inputs(market, contract), key=lambda each: (each.kind, each.subject))
+    found = {key: list(nodes) for key, nodes in by_curve}
     made = []
     for kind in NAMES:
         here = {subject: nodes for (each, subject), nodes in found.items() if each == kind}
@@ -78,6 +80,11 @@ def levers(market: Market, contract: Contract) -> tuple[Lever, ...]:
             made.append(_lever(market, kind, ALL, [node for nodes in here.values() for node in nodes]))
         made += [_lever(market, kind, subject, nodes) for subject, nodes in here.items()]
     return tuple(made)
+
+
+def without_lever(market: Market, contract: Contract) -> tuple[Input, ...]:
+    """The numbers that no lever moves: dividends and what concerns rates of exchange. They are taken as they stand."""
+    return tuple(number for number in inputs(market, contract) if number.kind not in NAMES)
 
 
 def alone(found: Sequence[Lever]) -> Iterator[Lever]:

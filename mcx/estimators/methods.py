@@ -13,8 +13,8 @@ from mcx.checked.market import Market
 from mcx.estimators.batches import Sampling
 from mcx.estimators.derivative_tape import DerivativeTape, derivative_tape, without_first_levels
 from mcx.estimators.differentiate import Differentiator
-from mcx.estimators.price import Ready
 from mcx.estimators.proxy import with_proxy
+from mcx.estimators.ready import Ready
 from mcx.faults import Refusal
 from mcx.leaves.market_map import MarketMap
 from mcx.machine.run import values_by_path
@@ -31,6 +31,7 @@ ESCROWS = (LeafKind.ESCROW, LeafKind.MEAN_ESCROW)
 ESCROWED_BY = ("rate", "yield", "forward", "dividend", "dividend share", "decrement points")  # what the escrow hangs on
 COMPARED = (Op.LT, Op.LE, Op.EQ, Op.NE)
 SINGULAR = 1e-14  # an own variance below this share of the whole
+NOTHING_DRAWN = "nothing is simulated: all that it pays is known"
 MOST_DRAWS = 64  # where every payment is smooth; the variance of a likelihood ratio grows with the steps
 
 
@@ -82,7 +83,9 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
     places = tuple({(jump.kind, jump.place): jump for payment in jumping for jump in found[payment]}.values())
     leaf_values = dict(zip(tape.leaves, values, strict=True))
     simulated = (*contract.assets, *simulated_rates(contract.conversion, contract.currency, market))
-    still = without_own_randomness(leaf_values, simulated)
+    still = without_own_randomness(leaf_values, simulated) if tape.normals + tape.uniforms else NOTHING_DRAWN
+
+    blended = any(market.assets[name].blend for name in contract.assets)
 
     def by_path(with_basis: Tape) -> np.ndarray:
         return values_by_path(lower(with_basis, values), seed=pilot.seed, paths=pilot.paths, stream=pilot.stream,
@@ -93,15 +96,16 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
         if likelihood and pilot and not still:
             logs = {leaf.asset: value for leaf, value in leaf_values.items() if leaf.kind is LeafKind.LOG_SPOT}
             own, proxy = with_proxy(tape, likelihood, logs, by_path)
+        compared = dividends_compared(tape, known, blended) if likelihood else ""
+        levels = bool(compared) and not in_extremes(tape, blended)
         made = derivative_tape(own, unrolled.grid, len(contract.assets), uniform_values(own, values), pathwise=pathwise,
-                               likelihood=likelihood, second=not still, proxy=proxy)
+                               likelihood=likelihood, second=not still, proxy=proxy, levels=levels)
         refusals = {}
         if likelihood and (reason := read_today(tape, known)):
             refusals |= {"spot": reason, "fx spot": reason}
-        if likelihood and (reason := dividends_compared(tape, known)):
-            blended = any(market.assets[name].blend for name in contract.assets)
-            refusals |= {kind: reason for kind in (*ESCROWED_BY, *(("spot",) if blended else ()))}
-        if reason := still or second_order_trouble(tape, made):
+        if compared and not levels:
+            refusals |= {kind: compared for kind in (*ESCROWED_BY, *(("spot",) if blended else ()))}
+        if reason := still or second_order_trouble(tape, made, blended):
             refusals["gamma"] = reason
         return Method(name, made, contract, refusals)
 
@@ -125,8 +129,8 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
 
 
 def without_own_randomness(values: dict[Leaf, float], names: Sequence[str]) -> str:
-    """Why the paths have no density: an asset or a rate of exchange (by `names`) that does not move by itself, or as good
-    as not; '' where all do."""
+    """Why the paths have no density: an asset or a rate of exchange (by `names`) that does not move by itself, or as
+    good as not; '' where all do."""
     variances: dict[tuple[int, float], float] = {}
     for leaf, value in values.items():
         if leaf.kind is LeafKind.FACTOR:
@@ -151,12 +155,14 @@ def read_today(tape: Tape, known: Sequence[float | None]) -> str:
     return ""
 
 
-def dividends_compared(tape: Tape, known: Sequence[float | None]) -> str:
-    """Why a likelihood ratio by a rate would miss something: cash dividends still to come are part of a level that is
-    compared, and their value moves while the draws are held; '' where they are not."""
+def dividends_compared(tape: Tape, known: Sequence[float | None], blended: bool = False) -> str:
+    """Why a likelihood ratio by a rate that holds the logs of levels would miss something: cash dividends still to come
+    are part of a level that is compared, and their value moves meanwhile; so do the shares that a blend makes of them,
+    which an extreme that is watched up to the ex date looks at. '' where they are not."""
     moved: set[int] = set()
     for number, step in enumerate(tape.instructions):
-        escrow = step.op is Op.LEAF and step.payload.kind in ESCROWS and known[number] != 0.0
+        kinds = (*ESCROWS, LeafKind.JUMP) if blended else ESCROWS
+        escrow = step.op is Op.LEAF and step.payload.kind in kinds and known[number] != 0.0
         if escrow or any(k in moved for k in step.operands):
             moved.add(number)
         if step.op in COMPARED and any(k in moved for k in step.operands) and known[number] is None:
@@ -165,8 +171,17 @@ def dividends_compared(tape: Tape, known: Sequence[float | None]) -> str:
     return ""
 
 
-def second_order_trouble(tape: Tape, made: DerivativeTape) -> str:
-    """Why there is no gamma; '' where there is one."""
+def in_extremes(tape: Tape, blended: bool) -> bool:
+    """Whether dividends are part of an extreme that is watched continuously, whose law given levels then moves too."""
+    kinds = (LeafKind.MEAN_ESCROW, LeafKind.JUMP) if blended else (LeafKind.MEAN_ESCROW,)
+    return any(leaf.kind in kinds for leaf in tape.leaves)
+
+
+def second_order_trouble(tape: Tape, made: DerivativeTape, blended: bool = False) -> str:
+    """Why there is no gamma; '' where there is one. `blended`: shares of the level that are made of cash dividends."""
+    if blended:
+        return ("dividends are blended from cash into shares of the level, which move with the spot; a second "
+                "derivative through both is not taken")
     if any(map(_is_today, tape.instructions)):
         return "the payoff reads today's level itself beside later ones; a second derivative through both is not taken"
     if made.rough:

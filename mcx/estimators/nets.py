@@ -71,7 +71,7 @@ def net_draws(net: Net, order: Order, variances: np.ndarray) -> DrawPlan:
     """The plan of draws for a net on a contract whose `clock` is given."""
     orders = {Order.BRIDGE: bridge, Order.COMPONENTS: components}
     mixed = order in orders and variances.size > 0
-    return DrawPlan(net.scrambles, orders[order](variances) if mixed else None)
+    return DrawPlan(net.scrambles, order=orders[order](variances) if mixed else None)
 
 
 def on_net(

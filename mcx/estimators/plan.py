@@ -28,6 +28,9 @@ GROUP = 64  # paths are summed in groups of this size; planned numbers are whole
 FIRST_PILOT = 1 << 14
 LARGEST_PILOT = 1 << 20
 FEWEST_UNLIKE = 100  # paths of a pilot that must differ from the commonest value
+FEWEST_MEANS = 1024
+MOST_GROUPED = 2 * GROUP  # paths in a mean that are no scrambled points: strata of pairs
+FARTHEST = 16  # times its own paths that a pilot of scrambled points plans for
 FEWEST_PLANNED = 1 << 14
 LONGEST_SECONDS = 7 * 86400.0
 WITHIN = re.compile(r"([0-9]*\.?[0-9]+(?:[eE][+-]?[0-9]+)?)\s*(bp|%)?")
@@ -47,6 +50,20 @@ class Precision:
     relative: bool = False
     seconds: float | None = None
     words: str = f"{DEFAULT_PATHS:,} paths, the number used where nothing is asked"
+
+
+@dataclass(frozen=True, slots=True)
+class Independent:
+    """What a spread is read off: `values` (means,), independent, each the mean of `size` paths; `quantile` times the
+    error of their mean is half the width of its 95 % interval."""
+
+    values: np.ndarray
+    size: int = 1
+    quantile: float = NORMAL_95
+
+    @property
+    def paths(self) -> int:
+        return len(self.values) * self.size
 
 
 @dataclass(frozen=True, slots=True)
@@ -110,17 +127,17 @@ def check_fits(asked: Precision, *, notional: bool, title: str) -> None:
 
 def plan(
     asked: Precision,
-    prices: Callable[[int], np.ndarray],
+    pilot: Callable[[int], Independent],
     seconds_for: Callable[[int], float],
     exact: bool = False,
     pace: float | None = None,
 ) -> Plan:
     """The plan for a request.
 
-    `prices(n)` gives the price of each of the first n paths of the pilot's stream, shape (n,); `seconds_for(n)` runs n
-    paths of that stream and gives the time they took; `exact`: the price is the same on every path; `pace`
-    is about the seconds that a path takes, for sentences. Raises RequestError for a half-width that needs more than
-    MOST_PATHS.
+    `pilot(n)` gives independent prices, or means of so many, from at least n paths of the pilot's stream;
+    `seconds_for(n)` runs n paths of that stream and gives the time they took; `exact`: the price is the same on every
+    path; `pace` is about the seconds that a path takes, for sentences. Raises RequestError for a half-width that needs
+    more than MOST_PATHS.
     """
     if asked.seconds is not None:
         return _by_time(asked, seconds_for)
@@ -128,27 +145,44 @@ def plan(
         return Plan(asked.paths or DEFAULT_PATHS, 0, asked.words)
     if exact:
         return Plan(FEWEST_PLANNED, 0, asked.words, asked.within)
-    return _by_half_width(asked, prices, pace)
+    return _by_half_width(asked, pilot, pace)
 
 
-def _by_half_width(asked: Precision, prices: Callable[[int], np.ndarray], pace: float | None) -> Plan:
-    """The paths that bring the 95 % half-width below the target, by the upper end of what the variance may be."""
+def _by_half_width(asked: Precision, pilot: Callable[[int], Independent], pace: float | None) -> Plan:
+    """The paths that bring the 95 % half-width below the target, by the upper end of what the variance may be.
+
+    Means of scrambled points spread less the more points they have, so that the pilot grows while it is much smaller
+    than what it asks for; other means need enough of them for their variance to be known.
+    """
     size = FIRST_PILOT
-    found = prices(size)
-    while unlike(found) < FEWEST_UNLIKE and size < LARGEST_PILOT:
+    found = pilot(size)
+    while size < LARGEST_PILOT and (_few(found) or _too_small(asked, found)):
         size *= 4
-        found = prices(size)
-    warnings = []
-    if unlike(found) < FEWEST_UNLIKE:
-        warnings.append(f"of {size:,} pilot paths only {unlike(found)} differed from the rest: the number of paths for "
-                        f"the precision asked for cannot be planned well")
-    wanted = (NORMAL_95 / asked.within) ** 2 * upper_variance(found)
-    if warnings:
-        wanted = max(wanted, size)
+        found = pilot(size)
+    warnings, wanted = [], _wanted(asked, found)
+    if _few(found):
+        warnings.append(f"of {len(found.values):,} {'pilot paths' if found.size == 1 else 'means of pilot paths'} only "
+                        f"{unlike(found.values)} differed from the rest: the number of paths for the precision asked for "
+                        f"cannot be planned well")
+        wanted = max(wanted, found.paths)
     if wanted > MOST_PATHS:
         raise RequestError(_out_of_reach(asked, wanted, pace))
     paths = whole_groups(max(wanted, FEWEST_PLANNED))
-    return Plan(paths, size, asked.words, asked.within, tuple(warnings))
+    return Plan(paths, found.paths, asked.words, asked.within, tuple(warnings))
+
+
+def _few(found: Independent) -> bool:
+    return unlike(found.values) < min(FEWEST_UNLIKE, len(found.values) // 4)
+
+
+def _too_small(asked: Precision, found: Independent) -> bool:
+    if found.size > MOST_GROUPED:
+        return found.paths * FARTHEST < _wanted(asked, found)
+    return len(found.values) < FEWEST_MEANS
+
+
+def _wanted(asked: Precision, found: Independent) -> float:
+    return (found.quantile / asked.within) ** 2 * upper_variance(found.values) * found.size
 
 
 def _out_of_reach(asked: Precision, wanted: float, pace: float | None) -> str:

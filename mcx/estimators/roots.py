@@ -1,8 +1,8 @@
 """All places at which a price on common random numbers meets a target, each with its error and a confirmation.
 
-A scan on the first paths finds where the sign changes, and pairs of solutions that lie between two of its points; each is
-then found again on all paths, bracketed (R. Brent, "Algorithms for minimization without derivatives", 1973). The error
-of a solution is that of the price there, over the slope; fresh numbers confirm it.
+A scan on the first paths finds where the sign changes, and pairs of solutions that lie between two of its points; each
+is then found again on all paths, bracketed (R. Brent, "Algorithms for minimization without derivatives", 1973). The
+error of a solution is that of the price there, over the slope; fresh numbers confirm it.
 """
 
 from __future__ import annotations
@@ -71,8 +71,8 @@ class _Points:
 def solutions(
     distance: Distance, low: float, high: float, sampling: Sampling, possible: Callable[[float], bool] = lambda _: True,
 ) -> Solutions:
-    """Every move from `low` to `high` at which the distance is 0. 0 lies between them and is possible; `possible` is cheap,
-    and so is what it allows an interval."""
+    """Every move from `low` to `high` at which the distance is 0. 0 lies between them and is possible; `possible` is
+    cheap, and what it allows is an interval."""
     low, high = (_edge(possible, end) for end in (low, high))
     first = _Points(distance, possible, replace(sampling, paths=min(sampling.paths, SCANNED)))
     whole = _Points(distance, possible, sampling) if sampling.paths > SCANNED else first
@@ -100,7 +100,7 @@ def _edge(possible: Callable[[float], bool], end: float) -> float:
 
 
 def _brackets(grid: np.ndarray, values: np.ndarray, at: _Points, whole: _Points) -> Iterator[tuple[float, float]]:
-    """Stretches at whose ends the distance has different signs, in order; a zero belongs to the stretch that ends in it."""
+    """Stretches at whose ends the distance has different signs, in order; a zero belongs to the one that ends in it."""
     for number in range(len(grid) - 1):
         left, right = values[number], values[number + 1]
         if left * right < 0.0 or right == 0.0 or (number == 0 and left == 0.0):
@@ -109,8 +109,8 @@ def _brackets(grid: np.ndarray, values: np.ndarray, at: _Points, whole: _Points)
         inner = 0 < number and abs(left) <= min(abs(before), abs(after)) and min(before * left, left * after) > 0.0
         if inner:  # it turns here: it may have crossed 0 and come back
             sign = math.copysign(1.0, left)
-            turn = minimize_scalar(lambda move, s=sign: s * at(move), bounds=(grid[number - 1], grid[number + 1]), method="bounded",
-                                   options={"maxiter": 12})
+            turn = minimize_scalar(lambda move, s=sign: s * at(move), bounds=(grid[number - 1], grid[number + 1]),
+                                   method="bounded", options={"maxiter": 12})
             near = turn.fun < DOUBT * at.estimate(turn.x).standard_error
             if turn.fun < 0.0 or near and sign * whole(turn.x) < 0.0:
                 yield float(grid[number - 1]), float(turn.x)

@@ -28,7 +28,8 @@ NAMES = {"spot": "delta", "vol": "vega", "rate": "rho", "yield": "yield", "fundi
          "fx correlation": "fx correlation"}
 UNITS = {"vol": (POINT, "per vol point"), "rate": (BASIS_POINT, "per bp"), "yield": (BASIS_POINT, "per bp"),
          "funding": (BASIS_POINT, "per bp"), "forward": (1.0, "per 1 of forward"), "correlation": (POINT, "per point"),
-         "dividend": (1.0, "per 1 of cash"), "dividend share": (BASIS_POINT, "per bp"), "decrement": (BASIS_POINT, "per bp"),
+         "dividend": (1.0, "per 1 of cash"), "dividend share": (BASIS_POINT, "per bp"),
+         "decrement": (BASIS_POINT, "per bp"),
          "decrement points": (1.0, "per point a year"), "fx spot": (1.0, "per 1 of the rate"),
          "fx vol": (POINT, "per vol point"), "fx correlation": (POINT, "per point")}
 

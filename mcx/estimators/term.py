@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 from mcx.checked.contract import Contract, Figures
@@ -12,7 +11,7 @@ from mcx.checked.payoff import Term
 from mcx.dates.dated_contract import DatedContract
 from mcx.estimators.batches import Sampling
 from mcx.estimators.estimate import Estimate
-from mcx.estimators.price import prepare
+from mcx.estimators.ready import prepare
 from mcx.estimators.roots import Solutions, solutions
 from mcx.faults import RequestError, did_you_mean
 
@@ -23,9 +22,9 @@ INSIDE = 1e-9  # how far from a strict bound
 
 @dataclass(frozen=True, slots=True)
 class Solved:
-    """The values of a term at which the contract meets `target` (in the unit of the price). A term with several numbers is
-    moved by a sum, or where they are levels by a share, all alike; `stated` is its first number. The solutions' moves
-    are values of that number."""
+    """The values of a term at which the contract meets `target` (in the unit of the price). A term with several numbers
+    is moved by a sum, or where they are levels by a share, all alike; `stated` is its first number. The solutions'
+    moves are values of that number."""
 
     term: Term
     target: float
@@ -64,14 +63,16 @@ def solve_term(dated: DatedContract, market: Market, name: str, target: float, s
     found = solutions(distance, low - stated, high - stated, sampling)
     values = tuple(replace(each, move=stated + each.move) for each in found.found)
     together = len({value for row in figures.rows for value in row}) > 1
-    return Solved(term, target, stated, together, replace(found, found=values, low=stated + found.low, high=stated + found.high))
+    there = replace(found, found=values, low=stated + found.low, high=stated + found.high)
+    return Solved(term, target, stated, together, there)
 
 
 def _moved(term: Term, figures: Figures, move: float) -> Figures:
     """Every number of a term moved so that the first one moves by `move`."""
     first = figures.rows[0][0]
-    each: Callable[[float], float] = (lambda value: value * (1.0 + move / first)) if term.type == "level" else (lambda value: value + move)
-    return replace(figures, rows=tuple(tuple(map(each, row)) for row in figures.rows))
+    by_share = term.type == "level"
+    rows = (tuple(value * (1.0 + move / first) if by_share else value + move for value in row) for row in figures.rows)
+    return replace(figures, rows=tuple(rows))
 
 
 def _range(term: Term, figures: Figures) -> tuple[float, float]:

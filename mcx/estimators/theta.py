@@ -14,8 +14,9 @@ from dataclasses import replace
 from mcx.checked.market import Market
 from mcx.dates.dated_contract import DatedContract, Moment
 from mcx.estimators.batches import Batches, Sampling
-from mcx.estimators.price import Ready
+from mcx.estimators.ready import Ready
 from mcx.estimators.revalue import Revaluer
+from mcx.tape.state import State
 from mcx.tape.unroll import unroll
 
 DAY = 1.0 / 365.0
@@ -48,12 +49,14 @@ def _nearer(market: Market) -> Market:
     return replace(market, assets=assets)
 
 
-def between(dated: DatedContract) -> Iterator[str]:
+def between(dated: DatedContract, state: State) -> Iterator[str]:
     """What happens after the valuation date and up to one calendar day on, in words."""
-    for moment in dated.moments:
+    moments = [moment for moment in dated.moments if moment.day.time > 0.0] if state.ended is None else []
+    for moment in moments:
         if SAME_TIME < moment.day.time <= DAY + SAME_TIME:
             yield f"theta: {_names(moment)} on {moment.day} lies in between and is taken at today's levels"
-    due = {day: pay for moment in dated.moments for event in moment.events for pay, day in event.due.items()}
+    due = {each.due: each.pay for each in state.payments if each.amount}
+    due |= {day: pay for moment in moments for event in moment.events for pay, day in event.due.items()}
     for day, pay in due.items():
         if SAME_TIME < day.time <= DAY + SAME_TIME:
             yield f"theta: the payment '{pay.leg}' on {day} lies in between and is counted in"

@@ -1,8 +1,8 @@
-"""Can a dealer's quote be right? The gap on one footing, what holds it, what would have to be true, other readings of the
-contract, and where the money is.
+"""Can a dealer's quote be right? The gap on one footing, what holds it, what would have to be true, other readings of
+the contract, and where the money is.
 
-Everything but the readings is a revaluation of one tape on the same paths. What is compared is our price at the spots the
-quote was made at; the footing shows what that moves.
+Everything but the readings is a revaluation of one tape on the same paths. What is compared is our price at the spots
+the quote was made at; the footing shows what that moves.
 """
 
 from __future__ import annotations
@@ -21,7 +21,8 @@ from mcx.estimators.footing import Footing, footing, reference_shifts
 from mcx.estimators.levers import Lever, alone, levers
 from mcx.estimators.margin import Margin, day_one_margin
 from mcx.estimators.plan import Precision
-from mcx.estimators.price import Ready, Valuation, value
+from mcx.estimators.price import Valuation, value
+from mcx.estimators.ready import Ready
 from mcx.estimators.readings import ReadingsValuation, ReadingValue, value_readings
 from mcx.estimators.revalue import Revaluer, impossible
 from mcx.estimators.roots import SCANNED, Solution, Solutions, solutions
@@ -60,8 +61,8 @@ class Implied:
 
 @dataclass(frozen=True, slots=True)
 class Joint:
-    """The smallest joint move that meets the quote: each lever by a share of its half-width, `size` their root of squares.
-    `fresh` is the distance from the quote on numbers that were not used to find it."""
+    """The smallest joint move that meets the quote: each lever by a share of its half-width, `size` their root of
+    squares. `fresh` is the distance from the quote on numbers that were not used to find it."""
 
     shares: tuple[tuple[Lever, float], ...]
     size: float
@@ -71,8 +72,8 @@ class Joint:
 
 @dataclass(frozen=True, slots=True)
 class Money:
-    """Where the value lies, in the unit of the price: the certain minimum of all payments on the issuer's curve and, where
-    there is one, the certain maximum; every payment; what the funding spread takes off (None without one)."""
+    """Where the value lies, in the unit of the price: the certain minimum of all payments on the issuer's curve and,
+    where there is one, the certain maximum; every payment; what the funding spread takes off (None without one)."""
 
     floor: Extreme
     most: Extreme
@@ -158,16 +159,20 @@ class Bench:
             (SAMPLING, gap.half_width), (BID_OFFER, foot.half_width), (INPUTS, band), (TOLERANCE, quote.tolerance)))
         far = corner(self.revaluer, there.market, there.effects, gap.value, self.sampling) if there.effects else None
         threshold = max(foot.half_width or 0.0, quote.tolerance or 0.0)
-        closing = tuple(
-            each.name for each in there.readings.readings
-            if each.differs and _closes(gap, replace(each.price, value=meets - each.price.value), threshold))
+        closing = self.closing(there, gap, meets, threshold)
         solved = None
         if solve:
-            solved = solve_term(self.ready.dated, self.market, solve, foot.mid if target is None else target, self.sampling)
+            wanted = foot.mid if target is None else target
+            solved = solve_term(self.ready.dated, self.market, solve, wanted, self.sampling)
         return Verification(
             quote, foot, self.valuation, there.price, gap, bands, there.effects, there.unstated, far,
             tuple(there.implied(lever, meets) for lever in there.levers if lever.kind not in NOT_MOVED),
             there.joint(meets), there.readings, closing, self._money(quote), solved, time.perf_counter() - begun)
+
+    def closing(self, there: Compared, gap: Estimate, meets: float, threshold: float) -> tuple[str, ...]:
+        """The readings in which an open gap would not be there; up to `threshold` nobody calls it one."""
+        return tuple(each.name for each in there.readings.readings
+                     if each.differs and _closes(gap, replace(each.price, value=meets - each.price.value), threshold))
 
     def _money(self, quote: DealerQuote) -> Money:
         discount = self.ready.market.funded_discount
@@ -175,7 +180,8 @@ class Bench:
         margin = None
         if quote.issue_price is not None and life.value > 0.0:
             margin = day_one_margin(quote.issue_price, self.valuation.price, life, self.contract.size)
-        return Money(self.certain.least(discount), self.certain.most(discount), self.certain.payments(), self.funding, margin)
+        found = self.certain
+        return Money(found.least(discount), found.most(discount), found.payments(), self.funding, margin)
 
 
 class Compared:
@@ -239,8 +245,9 @@ class Compared:
     def _as_far_as_it_takes(self, shares: Sequence[tuple[Lever, float]], meets: float) -> Joint | None:
         if not any(share for _, share in shares):
             return None
-        found = solutions(lambda scale, sampling: self.distance(joint_shifts(shares, scale), meets, sampling), 0.0, FURTHEST,
-                          self.bench.sampling, lambda scale: self.possible(joint_shifts(shares, scale))).found
+        found = solutions(
+            lambda scale, sampling: self.distance(joint_shifts(shares, scale), meets, sampling), 0.0, FURTHEST,
+            self.bench.sampling, lambda scale: self.possible(joint_shifts(shares, scale))).found
         if not found:
             return None
         nearest = found[0]

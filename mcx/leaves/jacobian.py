@@ -29,9 +29,9 @@ STEP = 1e-40  # of the complex step: no digit of the real part can feel it
 
 @dataclass(frozen=True, slots=True)
 class Input:
-    """A number of the market document. `kind` is spot, vol, rate, funding, yield, forward or correlation; dividend (cash),
-    dividend share, decrement or decrement points; fx spot, fx vol or fx correlation (of a quanto). `subject` is the
-    asset, the pair as written ('harbour/quarry'), the rate of exchange or the currency; `tenor` the node or ex date as
+    """A number of the market document. `kind` is spot, vol, rate, funding, yield, forward or correlation; dividend
+    (cash), dividend share, decrement or decrement points; fx spot, fx vol or fx correlation (of a quanto). `subject` is
+    the asset, the pair as written ('harbour/quarry'), the rate of exchange or the currency; `tenor` the node or ex date as
     written, '' for a flat number."""
 
     kind: str
@@ -164,7 +164,8 @@ def _asset(asset: AssetMarket, by: Shifts) -> AssetMarket:
     if quanto is not None:
         quanto = replace(quanto, fx_vol=_curve(quanto.fx_vol, by, "fx vol", asset.name),
                          fx_correlation=shifted(quanto.fx_correlation, "fx correlation", ""))
-    return replace(asset, spot=spot, dividends=dividends, decrement=decrement, quanto=quanto, vol=_curve(asset.vol, by, "vol", asset.name), forwards=forwards,
+    return replace(asset, spot=spot, dividends=dividends, decrement=decrement, quanto=quanto,
+                   vol=_curve(asset.vol, by, "vol", asset.name), forwards=forwards,
                    dividend_yield=_curve(asset.dividend_yield, by, "yield", asset.name))
 
 

@@ -1,14 +1,13 @@
 """What the draw stage is told: where a run's normals and uniforms come from, as frozen records.
 
 A plan is read by `draws.py` as flags and arrays while the machine runs, so that no plan needs a compilation of
-its own, and the tape never knows of it. The fields stand in the order in which the draw stage applies them:
+its own, and the tape never knows of it. The draw stage applies them in this order:
 
-    words (random, or a net's)  ->  normals  ->  path order  ->  whatever moves finished normals
+    words (random, or a net's)  ->  strata of the first coordinate  ->  normals  ->  path order
 
-What chooses words (strata of the first coordinate) belongs before `order`, whose first coordinate is a path's end;
-what mirrors or shifts normals (antithetic partners, a change of drift) belongs after it: the order is linear and
-orthogonal, so that it commutes with a mirror, and a drift is stated for the normals that the tape reads. The weight
-of a change of drift is an expression of those normals, hence a matter of the tape.
+What chooses words (strata of the first coordinate) comes before `order`, whose first coordinate is a path's end. What
+mirrors or shifts finished normals (antithetic partners, a change of drift with its weight) is written into the tape,
+where a mirror shares the draws and a shift joins the drift.
 """
 
 from __future__ import annotations
@@ -50,10 +49,13 @@ class DrawPlan:
     scrambles  0, or how many independent scramblings of Sobol' points the path numbers range over: path
                scramble * 2^32 + point draws that point
     order      None: each coordinate is the normal of its own number
+    strata     0, or 64: the 64 paths of a group share out the range of the order's first coordinate (of the first normal,
+               without an order), one to each part of equal probability, so that only groups are independent
     """
 
     scrambles: int = 0
     order: PathOrder | None = None
+    strata: int = 0
 
 
 PLAIN = DrawPlan()

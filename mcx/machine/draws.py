@@ -23,6 +23,10 @@ from mcx.machine.special import normal_row
 
 _UNIFORM_BLOCKS = 1 << 31
 _ODD = np.uint32(1)
+_SIGN = np.uint32(1 << 31)
+_STRATUM_BITS = np.uint32(GROUP.bit_length() - 1)
+_STRATUM_SHIFT = np.uint32(33 - GROUP.bit_length())
+_IN_GROUP = np.uint64(GROUP - 1)
 
 
 class Drawing(NamedTuple):
@@ -32,6 +36,7 @@ class Drawing(NamedTuple):
     seed, stream       uint64
     directions, low    (draws, 32) and (draws, 64) uint32, row by row as `fill_net` wants them; no rows: random numbers
     keys               (draws, scrambles, 2) uint32
+    stratified  the normal whose words are stratified, or -1
     left, right, pairs, turns: as in `PathOrder`
     """
 
@@ -42,6 +47,7 @@ class Drawing(NamedTuple):
     directions: np.ndarray
     low: np.ndarray
     keys: np.ndarray
+    stratified: int
     left: np.ndarray
     right: np.ndarray
     pairs: np.ndarray
@@ -62,7 +68,9 @@ def drawing_of(plan: DrawPlan, normals: int, uniforms: int, seed: int, stream: i
     for bit in range(GROUP.bit_length() - 1):
         low ^= np.where(np.arange(GROUP) >> bit & 1, numbers[:, bit : bit + 1], np.uint32(0))
     keys = _keys(plan.scrambles, rows, seed, stream)[by_row[:rows]]
-    return Drawing(normals, uniforms, np.uint64(seed), np.uint64(stream), numbers, low, keys, *order)
+    assert plan.strata in (0, GROUP), "a group has one path in each stratum"
+    stratified = int(np.argmin(by_row[:normals])) if plan.strata and normals else -1
+    return Drawing(normals, uniforms, np.uint64(seed), np.uint64(stream), numbers, low, keys, stratified, *order)
 
 
 def _keys(scrambles: int, coordinates: int, seed: int, stream: int) -> np.ndarray:
@@ -99,11 +107,23 @@ def fill_draws(registers, words, runs, numbers, drawing):
         elif dimension % 4 == 0:
             block = np.uint64(dimension // 4 + (0 if normal else _UNIFORM_BLOCKS))
             fill_words(words, numbers, drawing.seed, block, drawing.stream)
+        if row == drawing.stratified:
+            _stratify(word, numbers)
         if normal:
             normal_row(registers[row], word, lanes)
         else:
             _uniform_row(registers[row], word, lanes)
     mix(registers, drawing.left, drawing.right, drawing.pairs, drawing.turns, lanes)
+
+
+@jit
+def _stratify(words, numbers):
+    """The six leading digits of each word replaced by the path's number in its group of 64: words k - 2^31 (int32)."""
+    wide_vectors()
+    for i in range(words.shape[0]):
+        rest = np.uint32(np.uint32(words[i]) ^ _SIGN) >> _STRATUM_BITS
+        stratum = np.uint32(numbers[i] & _IN_GROUP) << _STRATUM_SHIFT
+        words[i] = np.int32(np.uint32(rest | stratum) ^ _SIGN)
 
 
 @jit

@@ -23,7 +23,9 @@ class Stream(IntEnum):
 
     MAIN = 0
     PILOT = 1
-    FRESH = 2
+    COEFFICIENTS = 2
+    CHOICE = 3
+    FRESH = 4
     REPLICATE = 1 << 16
 
 
@@ -143,7 +145,7 @@ def run(
                 means, squares, bad, sums = crew.run(numbers)
                 _refuse_bad(bad, numbers, code, seed, stream)
                 _refuse_bad_sum(sums, first_path + first, seed, stream)
-                totals.add(count, means, squares)
+                totals.add(count, means, np.zeros_like(squares) if plan.strata else squares)
                 parts.add(count, sums)
                 noted = tuple(Snapshot(*reached_then) for reached_then in totals.noted)
                 reached = BlockSums(totals.paths, totals.mean, totals.squares, noted, batch_paths=parts.paths.copy(),
@@ -238,10 +240,11 @@ def levels(
 
 
 def values_by_path(
-    program: Program, *, seed: int, paths: int, stream: int = Stream.MAIN, threads: int | None = None
-) -> np.ndarray:
+    program: Program, *, seed: int, paths: int, stream: int = Stream.MAIN, plan: DrawPlan = PLAIN,
+    threads: int | None = None,
+) -> np.ndarray:  # fmt: skip
     """All outputs of the first paths, shape (outputs, paths)."""
-    return levels(program, seed=seed, stream=stream, numbers=np.arange(paths), threads=threads).T
+    return levels(program, seed=seed, stream=stream, numbers=np.arange(paths), plan=plan, threads=threads).T
 
 
 def draws(

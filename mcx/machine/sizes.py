@@ -11,7 +11,8 @@ import numpy as np
 from mcx.machine.draw_plan import PLAIN, DrawPlan
 from mcx.machine.forms import Form
 from mcx.machine.prepare import KernelCode, prepare
-from mcx.tape.program import Program
+from mcx.tape.ops import Op
+from mcx.tape.program import Program, Tape
 
 GROUP = 64  # paths that are summed together, whatever the block
 BATCHES = 64  # parts of a run: group g of 64 paths belongs to part g mod 64, so that the parts grow together
@@ -30,6 +31,7 @@ _DEAR = {
     Form.BRIDGE_LOW_RRSR: 0.8,
     Form.BRIDGE_HIGH_RRSR: 0.8,
 }
+_BY_OP = {Op.DIV: 0.42, Op.SQRT: 0.75, Op.EXP: 1.1, Op.LOG: 1.6, Op.POW: 1.6, Op.BRIDGE_LOW: 3.3, Op.BRIDGE_HIGH: 3.3}
 _BY_FORM = np.array([_DEAR.get(form, _USUAL) for form in Form])
 
 
@@ -50,6 +52,11 @@ def cost(program: Program, plan: DrawPlan = PLAIN) -> float:
     if plan.order is not None:
         drawn += _TURN * len(plan.order.pairs) + _BEND * (program.normals if plan.order.left.size else 0)
     return nanoseconds(prepare(program)) + drawn
+
+
+def op_costs(tape: Tape) -> np.ndarray:
+    """Roughly what each instruction of a tape costs, (instructions,): which of its values share work is then seen."""
+    return np.array([_BY_OP.get(step.op, _USUAL) if step.operands else 0.0 for step in tape.instructions])
 
 
 def batch_for(code: KernelCode, lanes: int) -> int:

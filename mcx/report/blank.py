@@ -1,4 +1,5 @@
-"""A contract and a market to fill in for a definition: what is to be written is left empty, with a word about it.
+"""A contract, a market and a quote to fill in for a definition: what is to be written is left empty, with a word about
+it.
 
 Loaded as it is, the text gives a fault for every blank and for nothing else.
 """
@@ -8,18 +9,23 @@ from __future__ import annotations
 from collections.abc import Iterator, Sequence
 from itertools import combinations
 
+from mcx.checked.dealer_quote import OF_NOTIONAL, OF_UNITS
 from mcx.checked.payoff import MONEY, MULTIPLES, Deliver, Payoff, Term
 from mcx.checked.read_contract import uses_period
 from mcx.report.wording import figure
 
 WIDTH = 34  # where the words about a blank begin
-LATER = "# A quote to fill in comes with the version that explains quotes."
 BOUNDS = (("above", "above"), ("below", "below"), ("at_least", "at least"), ("at_most", "at most"))
 SIZES = {
     MONEY: ("units", "", "a number; payments are money per unit"),
     MULTIPLES: ("notional", "", "an amount; payments are multiples of it"),
     "": ("notional", "", "an amount; for payments in money per unit write 'units:' instead"),
 }
+OPTIONAL = (  # of a quote
+    ("bid_offer", "the whole width, in the unit of the price"), ("spot", "level of each asset that it was made at"),
+    ("size", "how much it is good for"), ("fees", "what is in it beyond the dealer's own price, in its unit"),
+    ("issue_price", "as 100%, for the day-one margin"), ("tolerance", "a gap that nobody asks about, as 25 bp"),
+)
 WRITTEN = {
     "number": "a number",
     "percent": "as 70% or 25 bp",
@@ -32,8 +38,8 @@ WRITTEN = {
 
 
 def blank(payoff: Payoff, assets: Sequence[str]) -> str:
-    """The two documents as YAML text."""
-    return "\n".join((*_contract(payoff, assets), "---", *_market(assets), LATER)) + "\n"
+    """The three documents as YAML text."""
+    return "\n".join((*_contract(payoff, assets), "---", *_market(assets), "---", *_quote(payoff))) + "\n"
 
 
 def _line(key: str, value: str = "", about: str = "", indent: int = 0) -> str:
@@ -103,3 +109,17 @@ def _market(assets: Sequence[str]) -> Iterator[str]:
         yield "correlation:"
         for first, second in combinations(assets, 2):
             yield _line(f"{first}/{second}", about="as 65%", indent=2)
+
+
+def _quote(payoff: Payoff) -> Iterator[str]:
+    units, prices = (OF_UNITS, "as 12.35") if payoff.pays == MONEY else (OF_NOTIONAL, "as 98.35%, or money")
+    yield "# A dealer's quote, for 'mcx verify'. Leave this document out where there is none."
+    yield _line("quote", about="who says it")
+    yield _line("at", about="date and time, as 2026-12-01 16:30")
+    yield _line("side", about="bid, ask or mid; two-way, with 'bid' and 'ask' in place of 'price'")
+    yield _line("unit", about=f"{', '.join(units[:-1])} or {units[-1]}")
+    yield _line("price", about=f"in that unit, {prices}")
+    yield _line("accrual", about="dirty; or clean, with 'accrued' beside it")
+    yield _line("commitment", about="firm or indicative")
+    for key, about in OPTIONAL:
+        yield _line(f"# {key}", about=f"optional; {about}")

@@ -6,8 +6,8 @@ from collections.abc import Iterable, Iterator
 
 from mcx.dates.dated_contract import DatedContract, Day, Moment
 from mcx.report.events import event_label
-from mcx.report.results import CalendarLine, CalendarView
 from mcx.report.settled import Settled, right_sides
+from mcx.report.state_results import CalendarLine, CalendarView
 from mcx.report.wording import joined
 from mcx.tape.state import State
 
@@ -42,7 +42,7 @@ def _lines(dated: DatedContract, state: State | None) -> Iterator[tuple[float, C
         for each in moment.events:
             actions = settled.actions(each.event)
             if each.event.condition is not None and actions:
-                yield line(moment.day, "decision", event_label(each.event, contract.payoff))
+                yield line(moment.day, "decision", event_label(each.event))
             for action in actions:
                 if action in each.due:
                     payments[each.due[action], action.leg] = None

@@ -31,7 +31,7 @@ def warnings(valuation: Valuation, tape: Tape, martingale: tuple[Martingale, ...
         yield (f"the precision asked for was not reached: the 95 % half-width is {valuation.price.half_width:.3g}, "
                f"asked for was {valuation.plan.target:.3g}")
     for output, estimate in valuation.of("condition"):
-        count = round(estimate.value * estimate.paths)
+        count = _met(estimate, plain=not valuation.reduction)
         if not output.day and count < FEW_PATHS and tape.instructions[output.value].op is not Op.CONSTANT:
             seen = "no path" if count == 0 else f"only {count} of {estimate.paths:,} paths"
             yield f"{seen} met '{output.subject}': what depends on it is poorly known, and so is the error"
@@ -43,6 +43,13 @@ def warnings(valuation: Valuation, tape: Tape, martingale: tuple[Martingale, ...
     if abs(jump) > LARGE_Z:
         yield (f"the price moved by {abs(jump):.1f} standard errors between half and all of the paths: a few paths "
                f"weigh heavily, and the error is not to be trusted")
+
+
+def _met(estimate: Estimate, plain: bool) -> int:
+    """How many paths met a condition; with variance reduction, how many plain ones would know it as well."""
+    if plain or estimate.standard_error == 0.0:
+        return round(estimate.value * estimate.paths)
+    return round((estimate.value / estimate.standard_error) ** 2)
 
 
 def _odds(z: float) -> str:

@@ -15,8 +15,8 @@ from mcx.dates.dated_contract import DatedContract, Occasion
 from mcx.faults import Place
 from mcx.leaves.market_map import MarketMap
 from mcx.report.events import event_label
-from mcx.report.results import Distance
 from mcx.report.settled import Settled
+from mcx.report.state_results import Distance
 from mcx.report.wording import COMPARED
 from mcx.tape.builder import Builder
 from mcx.tape.formulas import Formulas, Scene, Unreadable
@@ -44,7 +44,9 @@ def distances(dated: DatedContract, state: State, market: MarketMap) -> Iterator
                     yield Distance(what, date, name, level, today[asset], level / today[asset] - 1.0)
 
 
-def _conditions(dated: DatedContract, settled: Settled, state: State) -> Iterator[tuple[str, str, Formula, Occasion | None]]:
+def _conditions(
+    dated: DatedContract, settled: Settled, state: State
+) -> Iterator[tuple[str, str, Formula, Occasion | None]]:
     """What is decided next: of every running flag that has not turned for good, and of every event, the first
     time after the valuation date."""
     wanted = {running.name: running for running in settled.running}
@@ -62,7 +64,7 @@ def _conditions(dated: DatedContract, settled: Settled, state: State) -> Iterato
         for each in moment.events:
             if each.event.condition is not None and each.event.place not in told:
                 told.add(each.event.place)
-                label = event_label(each.event, dated.contract.payoff)
+                label = event_label(each.event)
                 yield label, str(moment.day), settled.formula(each.event.condition), each.occasion
 
 
@@ -97,7 +99,8 @@ def _turns(
     comparison: Binary, dated: DatedContract, state: State, occasion: Occasion | None, today: list[float]
 ) -> Iterator[tuple[int, float]]:
     """For each asset the level at which both sides are equal."""
-    gaps = [_gaps(comparison, dated, state, occasion, [level * factor for level in today]) for factor in (1.0, 2.0, 3.0)]
+    gaps = [_gaps(comparison, dated, state, occasion, [level * factor for level in today])
+            for factor in (1.0, 2.0, 3.0)]
     if None in gaps or len(gaps[0]) != len(today):
         return
     for asset, (first, second, third) in enumerate(zip(*gaps, strict=True)):

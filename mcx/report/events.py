@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterable
 
 from mcx.checked.formula import Binary, Formula, IfElse, Number
-from mcx.checked.payoff import Action, Assign, Deliver, End, Event, Pay, Payoff
+from mcx.checked.payoff import Action, Assign, Deliver, End, Event, Pay
 from mcx.dates.dated_contract import DatedContract, Day
 from mcx.report.results import EventLine
 from mcx.report.settled import Settled
@@ -17,15 +17,18 @@ STILL = "It still happens on a date on which {} ends the contract."
 NO_LONGER = "It no longer happens on a date on which {} has ended the contract."
 
 
-def event_label(event: Event, payoff: Payoff) -> str:
-    """An event's name, or its number in the definition."""
-    return event.name or f"event {payoff.events.index(event) + 1}"
+def event_label(event: Event) -> str:
+    """An event's name; without one its legs, or the values that it sets."""
+    actions = (*event.then, *event.otherwise)
+    legs = dict.fromkeys(action.leg for action in actions if isinstance(action, Pay))
+    values = dict.fromkeys(name for action in actions if isinstance(action, Assign) for name, _ in action.values)
+    return event.name or joined(legs) or (f"{joined(values)} set" if values else "end")
 
 
 def event_line(event: Event, dated: DatedContract, words: Words, settled: Settled) -> EventLine:
     """An event of the contract in words."""
     on = _days_of(event, dated)
-    name = event_label(event, dated.contract.payoff)
+    name = event_label(event)
     side = settled.side(event)
     if not on:
         return EventLine(name, f"Never in this contract: {_schedule(event)} has no such date.", ())
@@ -96,8 +99,8 @@ def _delivering(action: Deliver, event: Event, dated: DatedContract, words: Word
     leg = f" as '{action.leg}'" if action.leg != "payment" else ""
     which = "" if action.which is None else f" of each asset of which {words.formula(settled.formula(action.which))}"
     unit = "for each unit" if dated.contract.notional is None else "for each unit of the notional"
-    return (f"delivers {words.formula(settled.formula(action.amount))} shares {unit}{which}{leg}, worth their level then, "
-            f"fractions in cash, {_due(action, event, dated)}")
+    return (f"delivers {words.formula(settled.formula(action.amount))} shares {unit}{which}{leg}, worth their level "
+            f"then, fractions in cash, {_due(action, event, dated)}")
 
 
 def _amount(amount: Formula, dated: DatedContract, words: Words) -> str:
@@ -129,7 +132,7 @@ def _at_the_end(event: Event, dated: DatedContract, settled: Settled) -> Iterabl
     for other in events:
         ends = any(isinstance(action, End) for action in settled.actions(other))
         if ends and other is not event and own & set(_days_of(other, dated)):
-            label = f"'{event_label(other, dated.contract.payoff)}'"
+            label = f"'{event_label(other)}'"
             (before if events.index(event) < events.index(other) else after).append(label)
     if before:
         yield STILL.format(joined(before, "or"))

@@ -8,10 +8,11 @@ from mcx.checked.market import Market
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.greeks import Found, Value, Wish
 from mcx.estimators.ladder import Point, Step
-from mcx.estimators.price import Ready
+from mcx.estimators.ready import Ready
 from mcx.estimators.sensitivities import Curvature, Sensitivity
 from mcx.report.cautions import assumptions, cautions, limits
 from mcx.report.greek_results import AssetDelta, Greek, GreeksResult, GridPoint, Jump, Refused, Rung
+from mcx.report.plausible import implausible
 from mcx.report.results import Planned
 from mcx.report.summary import NO_REDUCTION
 
@@ -53,7 +54,7 @@ def greeks_result(ready: Ready, market: Market, wish: Wish, found: Found) -> Gre
         jumps=tuple(Jump(jump.kind, str(jump.place or "")) for jump in found.jumps),
         ladder=tuple(_rung(step, assets, contract.size) for step in found.ladder),
         grid=tuple(_point(point, contract.size) for point in found.grid),
-        warnings=tuple(_warnings(found)),
+        warnings=(*_warnings(found), *implausible(dated, ready.market)),
         assumptions=tuple(dict.fromkeys((*assumptions(dated, market, ready.market), *CONVENTIONS))),
         limits=tuple(limits(dated)),
         cautions=tuple(cautions(dated, named=False)),

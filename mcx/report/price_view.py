@@ -55,6 +55,8 @@ def show_price(result: PriceResult, page: Page) -> None:
         page.table(("paid on", "leg", "fixed on", scale.unit, result.currency, "present value"), (
             (each.date, each.leg, each.observed, scale.show(each.amount, max(scale.fewest, 4)), fixed(each.value, 2),
              fixed(each.present_value, 2)) for each in result.owed), words=3)
+    if result.hedge:
+        _hedge(result, scale, page)
     if result.conditions or result.ends:
         page.heading(PROBABILITIES)
         _probabilities(result, page)
@@ -85,6 +87,8 @@ def facts(result: PriceResult, scale: Scale) -> Iterator[tuple[str, str]]:
     yield "95 % interval", f"{low} to {high}{scale.sign}"
     yield "paths", f"{result.paths:,} in {result.seconds:.2f} s; asked for: {result.planned.asked}"
     yield "seed", f"{result.seed}; variance reduction: {result.reduction}"
+    for number, note in enumerate(result.reduction_notes):
+        yield "" if number else "variance reduction", note
     life = decimals(result.expected_life_standard_error, 2, 2)
     yield "expected life", f"{fixed(result.expected_life, min(life, 4))} years (risk-neutral)"
 
@@ -97,6 +101,15 @@ def amounts(amounts: Sequence[Amount], result: PriceResult, scale: Scale) -> Ite
     if len(amounts) > 1:
         price, error = (scale.show(number, places) for number in (result.price, result.standard_error))
         yield ("sum", price, error, fixed(result.value, 2))
+
+
+def _hedge(result: PriceResult, scale: Scale, page: Page) -> None:
+    page.heading("what a hedger is left with (standard deviation)")
+    places = scale.places(max(each.standard_error for each in result.hedge))
+    page.table(("traded on", scale.unit, "standard error"), (
+        (f"{each.dates} date{'' if each.dates == 1 else 's'}", scale.show(each.deviation, places),
+         scale.show(each.standard_error, places)) for each in result.hedge))
+    page.line("  deltas regressed on what is known on each date; under the pricing measure, without costs")
 
 
 def _probabilities(result: PriceResult, page: Page) -> None:

@@ -15,6 +15,8 @@ from mcx.checked.payoff import Assign, Continuous, Pay, Running
 from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Occasion, Watch
 from mcx.leaves.market_map import MarketMap
 from mcx.report.events import event_label, event_line
+from mcx.report.plausible import implausible
+from mcx.report.quotes import quotes
 from mcx.report.results import (
     AssetDate,
     DateLine,
@@ -28,13 +30,14 @@ from mcx.report.results import (
 from mcx.report.settled import Settled, right_sides
 from mcx.report.state import state_view
 from mcx.report.underlyings import underlyings
-from mcx.report.wording import Words, days, figure, joined, period
+from mcx.report.wording import Words, days, joined, period
 from mcx.tape.steps import PLAIN
 from mcx.tape.unroll import Unrolled, unroll
 
 HOW = {"average": "the average of {}", "total": "the sum of {}", "product": "the product of {}",
        "lowest": "the lowest {}", "highest": "the highest {}", "latest": "the latest {}",
-       "ever": "whether ever {}", "always": "whether always {}"}
+       "ever": "true once {}", "always": "true as long as {}"}
+FLAGS = ("ever", "always")
 CONVERSIONS = {"quanto": "its level counts as quoted, at a fixed rate of exchange (quanto)",
                "composite": "its level is converted at the rate of exchange of the same day (composite)"}
 LAWS = {"exact": "the level between two dates is a Brownian bridge in its log, whose extreme has a known law",
@@ -61,7 +64,9 @@ def readback(dated: DatedContract, market: Market | None, path: PathResult | Non
         events=tuple(event_line(event, dated, words, settled) for event in contract.payoff.events),
         watches=tuple(_watches(dated, settled, unrolled)),
         dates=tuple(_dates(dated, words, settled)),
+        warnings=tuple(implausible(dated, market_map)),
         assumptions=(*dated.assumptions, *(underlyings(dated, market_map) if market_map else ())),
+        quotes=tuple(quotes(market_map)) if market_map else (),
         market=tuple(_market(dated, market_map)) if market_map else (),
         path=path,
         state=state_view(dated, unrolled.state, market_map) if market_map and dated.valuation else None,
@@ -73,9 +78,9 @@ def _facts(dated: DatedContract) -> Iterator[Sentence]:
     contract = dated.contract
     yield Sentence("currency", contract.currency)
     if contract.notional is not None:
-        yield Sentence("notional", f"{figure(contract.notional)} {contract.currency}; amounts are multiples of it")
+        yield Sentence("notional", f"{contract.notional:,.15g} {contract.currency}; amounts are multiples of it")
     else:
-        yield Sentence("units", f"{figure(contract.units)}; amounts are {contract.currency} for each unit")
+        yield Sentence("units", f"{contract.units:,.15g}; amounts are {contract.currency} for each unit")
     yield Sentence("assets", joined(contract.assets))
     if contract.conversion:
         said = (f"{name}: {CONVERSIONS[how]}" for name, how in contract.conversion.items())
@@ -117,7 +122,9 @@ def _running(running: Running, dated: DatedContract, words: Words, settled: Sett
         what = f"how often {words.formula(formula)}" if formula.kind.is_flag else \
             f"{words.formula(formula)} for each date"
     earlier = f"; {first} counts as an earlier value" if given else ""
-    return f"{what}, so far, {_when(running, dated)}{earlier}"
+    when = _when(running, dated)
+    how = when if when.startswith("watched") else f"{'observed' if running.how in FLAGS else 'so far,'} {when}"
+    return f"{what}, {how}{earlier}"
 
 
 def _when(running: Running, dated: DatedContract) -> str:
@@ -127,7 +134,7 @@ def _when(running: Running, dated: DatedContract) -> str:
         return f"watched all the time from {watch.start} to {watch.end}"
     on = [update.occasion.day for moment in dated.moments for update in moment.updates
           if update.running.name == running.name]
-    name = "" if isinstance(running.at, Continuous) else f" ({running.at.name})"
+    name = "" if isinstance(running.at, Continuous) else f" (see '{running.at.name}')"
     return f"on {days(on)}{name}" if on else "on no date"
 
 
@@ -207,7 +214,7 @@ def _line(occasion: Occasion, what: str, paid: str, words: Words, names: Iterato
 def _what(event: DatedEvent, settled: Settled) -> str:
     """What an event is about: its name and, without one, its legs or the values it sets."""
     if event.event.name:
-        return event_label(event.event, settled.contract.payoff)
+        return event_label(event.event)
     legs = [f"{action.leg} paid" for action in settled.actions(event.event) if isinstance(action, Pay)]
     values = [f"{name} set" for action in settled.actions(event.event) if isinstance(action, Assign)
               for name, _ in action.values]

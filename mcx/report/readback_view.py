@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
-from mcx.report.results import CalendarView, Library, MarketDate, PathResult, Readback, Replay, StateView
+from mcx.report.results import Library, MarketDate, PathResult, Readback, Replay
+from mcx.report.state_results import CalendarView, Fixed, StateView
 from mcx.report.terminal import Page, fixed
 
+LATEST = 20  # dates with fixings that are shown
 ASSETS = 2  # beside one another in the market table
 
 
@@ -31,9 +33,15 @@ def show_readback(result: Readback, page: Page) -> None:
     page.table(("date", "no.", "what", "terms of the date", "paid on"), (
         (line.date, str(line.nth) if line.nth else "", line.what, line.terms, line.paid) for line in result.dates),
         words=5)
+    if result.warnings:
+        page.heading("warnings")
+        page.items(result.warnings)
     if result.assumptions:
         page.heading("assumptions")
         page.items(result.assumptions)
+    if result.quotes:
+        page.heading("the market today")
+        page.named((quote.name, quote.text) for quote in result.quotes)
     if result.market:
         _market(result.market, page)
     if result.state:
@@ -63,11 +71,10 @@ def _state(state: StateView, page: Page) -> None:
     if state.ended:
         page.line(f"ended on {state.ended}", style="bold")
     if state.past:
-        page.table(("date", "what", "happened"), ((each.date, each.what, each.happened) for each in state.past), words=3)
+        page.table(("date", "what", "happened"), (
+            (each.date, each.what, each.happened) for each in state.past), words=3)
     if state.fixings:
-        page.heading("fixings used, as they count")
-        page.table(("date", "asset", "level"), ((each.date, each.asset, f"{each.level:.10g}") for each in state.fixings),
-                   words=2)
+        _fixings(state.fixings, page)
     if state.running:
         page.heading("running values so far")
         page.named((each.name, each.text) for each in state.running)
@@ -88,6 +95,17 @@ def _state(state: StateView, page: Page) -> None:
         page.table(("what", "next on", "asset", "level", "today", "distance"), (
             (each.what, each.date, each.asset, f"{each.level:.6g}", f"{each.today:.6g}",
              fixed(100.0 * each.distance, 2, "%")) for each in state.distances), words=3)
+
+
+def _fixings(fixings: tuple[Fixed, ...], page: Page) -> None:
+    """The latest fixings that were read, a line for each date."""
+    dates = list(dict.fromkeys(each.date for each in fixings))
+    names = list(dict.fromkeys(each.asset for each in fixings))
+    levels = {(each.date, each.asset): f"{each.level:.10g}" for each in fixings}
+    left = f" (the last {LATEST} of {len(dates)} dates; all of them: --json)" if len(dates) > LATEST else ""
+    page.heading(f"fixings used, as they count{left}")
+    page.table(("date", *names), (
+        [date, *(levels.get((date, name), "") for name in names)] for date in dates[-LATEST:]))
 
 
 def show_calendar(result: CalendarView, page: Page) -> None:

@@ -31,8 +31,8 @@ REQUEST = {  # what a result repeats of its request, by verb
 }
 CLOSE = 1e-12  # relative, on another type of processor
 # How long it took, how the number of paths was found, and what is worded: sentences change with versions.
-NOT_COMPARED = ("seconds", "planned", "verdict", "text", "about", "note", "choices", "warnings", "assumptions", "limits",
-                "cautions", "calendar_version")
+NOT_COMPARED = ("seconds", "planned", "verdict", "leads", "text", "about", "note", "choices", "reduction_notes",
+                "warnings", "assumptions", "limits", "cautions", "calendar_version")
 
 
 def environment() -> dict[str, str]:

@@ -151,15 +151,27 @@ class Planned(Result):
 
 
 @dataclass(frozen=True, slots=True)
+class HedgeLine(Result):
+    """What a hedger is left with who trades on `dates` dates, today included (0: without a hedge): the standard deviation
+    of the discounted value less the hedge's gains, in the unit of the price, and its standard error."""
+
+    dates: int
+    deviation: float
+    standard_error: float
+
+
+@dataclass(frozen=True, slots=True)
 class PriceResult(Result):
     """What a contract is worth: `mcx price`.
 
     `notional` or `units` is None. `valuation` is None for textbook markets. `ends` holds how often the contract ended
     early on each date, `reached_maturity` how often it did not, and `expected_life` the years to the payment that ends
-    it. `owed` are amounts that fixings have settled and that are not yet paid; they are part of the price, which is dirty:
-    `accrued` is the interest of certain coupons in their running period, and `clean` the price less that. `ended` is the
-    date on which the contract has ended already, '' where it lives. `warnings` are about this run, `assumptions` what was taken as given, `limits` what the model leaves out,
-    `cautions` how the number may be used.
+    it. `reduction` lists the methods of variance reduction, 'none' without, `reduction_notes` what they found;
+    `paths` counts both paths of a pair. `hedge` is empty unless gains of a hedge are among the methods. `owed` are
+    amounts that fixings have settled and that are not yet paid; they are part of the price, which is dirty: `accrued` is
+    the interest of certain coupons in their running period, and `clean` the price less that. `ended` is the date on which
+    the contract has ended already, '' where it lives. `warnings` are about this run and about what looks like a slip,
+    `assumptions` what was taken as given, `limits` what the model leaves out, `cautions` how the number may be used.
     """
 
     MAIN: ClassVar[str] = "legs"
@@ -179,6 +191,8 @@ class PriceResult(Result):
     seconds: float
     seed: int
     reduction: str
+    reduction_notes: tuple[str, ...]
+    hedge: tuple[HedgeLine, ...]
     interrupted: bool
     planned: Planned
     legs: tuple[Amount, ...]
@@ -226,7 +240,7 @@ class TermLine(Result):
 
 @dataclass(frozen=True, slots=True)
 class Sentence(Result):
-    """What a `let` name or a running value means."""
+    """What a name means: a `let` name, a running value, a quote of the market."""
 
     name: str
     text: str
@@ -315,75 +329,10 @@ class PathResult(Result):
 
 
 @dataclass(frozen=True, slots=True)
-class Fixed(Result):
-    """A level of the past as it counts in the contract: converted and adjusted."""
-
-    date: str
-    asset: str
-    level: float
-
-
-@dataclass(frozen=True, slots=True)
-class PastLine(Result):
-    """An event of the past, and whether it happened: 'yes', 'no', or "by today's level"."""
-
-    date: str
-    what: str
-    happened: str
-
-
-@dataclass(frozen=True, slots=True)
-class Distance(Result):
-    """How far today's level of an asset is from one at which a comparison turns: `level` and `today` as they count,
-    `distance` as a part of today's level (-0.25: it must fall by a quarter). `date` is the next on which it is read."""
-
-    what: str
-    date: str
-    asset: str
-    level: float
-    today: float
-    distance: float
-
-
-@dataclass(frozen=True, slots=True)
-class StateView(Result):
-    """What has become of a contract by the valuation date. `accrued` is in the unit of the price; `running` are values
-    so far; `next` what comes next; `distances` of today's levels to those that matter."""
-
-    valuation: str
-    fixings: tuple[Fixed, ...]
-    past: tuple[PastLine, ...]
-    paid: tuple[Payment, ...]
-    owed: tuple[Owed, ...]
-    to_deliver: tuple[str, ...]
-    accrued: float
-    running: tuple[Sentence, ...]
-    ended: str
-    next: tuple[Sentence, ...]
-    distances: tuple[Distance, ...]
-
-
-@dataclass(frozen=True, slots=True)
-class CalendarLine(Result):
-    """One thing to come: `kind` is 'fixing', 'decision' or 'payment'; `of` the assets, the event or the leg."""
-
-    date: str
-    contract: str
-    kind: str
-    of: str
-
-
-@dataclass(frozen=True, slots=True)
-class CalendarView(Result):
-    """What comes next of several contracts, in order of time: `mcx readback --calendar`."""
-
-    lines: tuple[CalendarLine, ...]
-
-
-@dataclass(frozen=True, slots=True)
 class Readback(Result):
-    """What a contract says: `mcx readback`. `market` is empty without a market, `path` None without given
-    levels, `state` None without a dated market."""
+    """What a contract says: `mcx readback`. `warnings` are about what looks like a slip; `quotes` (spots, correlations,
+    funding) and `market` are empty without a market, `path` None without given levels, `state` (a `StateView`) None
+    without a dated market."""
 
     MAIN: ClassVar[str] = "dates"
     contract: str
@@ -396,10 +345,12 @@ class Readback(Result):
     events: tuple[EventLine, ...]
     watches: tuple[WatchLine, ...]
     dates: tuple[DateLine, ...]
+    warnings: tuple[str, ...]
     assumptions: tuple[str, ...]
+    quotes: tuple[Sentence, ...]
     market: tuple[MarketDate, ...]
     path: PathResult | None
-    state: StateView | None
+    state: Result | None
 
 
 @dataclass(frozen=True, slots=True)

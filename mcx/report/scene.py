@@ -15,7 +15,7 @@ import numpy as np
 from mcx.checked.contract import Figures
 from mcx.checked.formula import Binary, Formula, Name, Number, walk
 from mcx.dates.dated_contract import DatedContract
-from mcx.estimators.price import Ready
+from mcx.estimators.ready import Ready
 from mcx.report.pictures.draw import Fan, Series
 from mcx.report.settled import Settled
 from mcx.report.wording import COMPARED, Words

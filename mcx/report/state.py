@@ -7,11 +7,12 @@ from collections.abc import Iterator
 from mcx.checked.payoff import Pay
 from mcx.dates.dated_contract import DatedContract, Day
 from mcx.dates.day_counts import year_fraction
-from mcx.estimators.price import Ready
+from mcx.estimators.ready import Ready
 from mcx.leaves.market_map import MarketMap
 from mcx.report.distances import distances
 from mcx.report.events import event_label
-from mcx.report.results import Fixed, Owed, PastLine, Payment, Sentence, StateView
+from mcx.report.results import Owed, Payment, Sentence
+from mcx.report.state_results import Fixed, PastLine, StateView
 from mcx.report.wording import figure
 from mcx.tape.state import State
 
@@ -48,11 +49,11 @@ def standing(ready: Ready) -> Iterator[str]:
     """Shares that are owed; that a contract has ended, and what is still to come of it."""
     state = ready.unrolled.state
     yield from to_deliver(ready.dated, state)
-    if state.ended is not None:
-        due = [each for each in state.payments if each.owed and each.amount]
-        yield (f"the contract ended on {state.ended}, by its fixings: what is owed until {max(str(each.due) for each in due)} "
-               "is all that it is worth" if due else
-               f"the contract ended on {state.ended}, by its fixings, and nothing is owed any more")
+    if state.ended is None:
+        return
+    due = [str(each.due) for each in state.payments if each.owed and each.amount]
+    left = f"what is owed until {max(due)} is all that it is worth" if due else "nothing is owed any more"
+    yield f"the contract ended on {state.ended}, by its fixings: {left}"
 
 
 def to_deliver(dated: DatedContract, state: State) -> Iterator[str]:
@@ -72,7 +73,7 @@ def state_view(dated: DatedContract, state: State, market: MarketMap) -> StateVi
     return StateView(
         valuation=str(Day(0.0, dated.valuation)),
         fixings=tuple(_fixings(dated, state)),
-        past=tuple(PastLine(str(each.day), event_label(each.event, contract.payoff), _held(each.held))
+        past=tuple(PastLine(str(each.day), event_label(each.event), _held(each.held))
                    for each in state.events if each.event.condition is not None or each.event.name),
         paid=tuple(Payment(str(each.due), each.pay.leg, each.amount, each.amount * contract.size) for each in paid),
         owed=owed_amounts(dated, state, market),
@@ -111,7 +112,7 @@ def _next(dated: DatedContract, state: State) -> Iterator[Sentence]:
     later = [moment for moment in dated.moments if moment.day.time > 0.0] if state.ended is None else []
     if later:
         moment = later[0]
-        what = [event_label(each.event, dated.contract.payoff) for each in moment.events]
+        what = [event_label(each.event) for each in moment.events]
         what += [f"{each.running.name} observed" for each in moment.updates]
         yield Sentence("observation", f"{moment.day}: {', '.join(dict.fromkeys(what))}")
     due = {each.due for each in state.payments if each.owed and each.amount}

@@ -6,13 +6,16 @@ import math
 
 from mcx.checked.market import Market
 from mcx.estimators.estimate import Estimate
-from mcx.estimators.price import Ready, Valuation
+from mcx.estimators.price import Valuation
+from mcx.estimators.ready import Ready
 from mcx.report.cautions import assumptions, cautions, limits, warnings
 from mcx.report.given_path import day_of
+from mcx.report.plausible import implausible
 from mcx.report.results import (
     Amount,
     Checks,
     Condition,
+    HedgeLine,
     Likelihood,
     Martingale,
     Planned,
@@ -49,14 +52,16 @@ def price_result(ready: Ready, market: Market, valuation: Valuation) -> PriceRes
         paths=price.paths,
         seconds=valuation.seconds,
         seed=valuation.seed,
-        reduction=NO_REDUCTION,
+        reduction=",".join(valuation.reduction) or NO_REDUCTION,
+        reduction_notes=valuation.notes,
+        hedge=tuple(HedgeLine(each.dates, each.deviation, each.standard_error) for each in valuation.hedge),
         interrupted=valuation.interrupted,
         planned=Planned(plan.asked, plan.paths, plan.pilot_paths, plan.target, met),
         legs=_amounts(valuation, "leg", contract.size),
         parts=_amounts(valuation, "part", contract.size),
         conditions=conditions,
         ends=ends,
-        reached_maturity=_not_ended(ends, price.paths),
+        reached_maturity=_not_ended(ends, price.paths, plain=not valuation.reduction),
         expected_life=life.value,
         expected_life_standard_error=life.standard_error,
         owed=owed(ready),
@@ -64,7 +69,7 @@ def price_result(ready: Ready, market: Market, valuation: Valuation) -> PriceRes
         clean=price.value - accrued(dated, ready.unrolled.state),
         ended=str(ready.unrolled.state.ended or ""),
         checks=Checks(martingale, tuple(Stage(e.paths, e.value, e.standard_error) for e in valuation.stages)),
-        warnings=tuple(warnings(valuation, ready.unrolled.tape, martingale, met)),
+        warnings=(*warnings(valuation, ready.unrolled.tape, martingale, met), *implausible(dated, ready.market)),
         assumptions=tuple(dict.fromkeys((*standing(ready), *assumptions(dated, market, ready.market)))),
         limits=tuple(limits(dated)),
         cautions=tuple(cautions(dated, bool(conditions or ends))),
@@ -91,9 +96,12 @@ def _conditions(valuation: Valuation) -> tuple[Condition, ...]:
     )
 
 
-def _not_ended(ends: tuple[Likelihood, ...], paths: int) -> Likelihood:
-    """How often the contract did not end early: the ends exclude one another."""
+def _not_ended(ends: tuple[Likelihood, ...], paths: int, plain: bool) -> Likelihood:
+    """How often the contract did not end early: the ends exclude one another. Where paths are not plain its error is at
+    most the root of the sum of squares of theirs."""
     chance = min(max(1.0 - sum(end.probability for end in ends), 0.0), 1.0)
+    if not plain:
+        return Likelihood("", chance, math.hypot(*(end.standard_error for end in ends)))
     return Likelihood("", chance, math.sqrt(chance * (1.0 - chance) / max(paths - 1, 1)))
 
 

@@ -66,8 +66,8 @@ class BandLine(Result):
 
 @dataclass(frozen=True, slots=True)
 class InputEffect(Result):
-    """What an input does to the price that moves up by its stated 90 % half-width, to first order. `half_width` is in the
-    unit of the input: a share for spots and forwards."""
+    """What an input does to the price that moves up by its stated 90 % half-width, to first order. `half_width` is in
+    the unit of the input: a share for spots and forwards."""
 
     input: str
     asset: str
@@ -79,8 +79,8 @@ class InputEffect(Result):
 
 @dataclass(frozen=True, slots=True)
 class WorstCorner(Result):
-    """The price with every input at the end of its half-width towards the quote (at `share` of it, where there is no such
-    market further out), and whether the quote lies on this side of it. It is never the band."""
+    """The price with every input at the end of its half-width towards the quote (at `share` of it, where there is no
+    such market further out), and whether the quote lies on this side of it. It is never the band."""
 
     price: float
     standard_error: float
@@ -150,8 +150,8 @@ class ReadingLine(Result):
 
 @dataclass(frozen=True, slots=True)
 class PaymentBounds(Result):
-    """What a payment is at least and at most, undiscounted, in the unit of the price; `most` None where there is no bound.
-    0 where it may not be owed."""
+    """What a payment is at least and at most, undiscounted, in the unit of the price; `most` None where there is no
+    bound. 0 where it may not be owed."""
 
     leg: str
     part: str
@@ -163,8 +163,8 @@ class PaymentBounds(Result):
 
 @dataclass(frozen=True, slots=True)
 class MarginResult(Result):
-    """Issue price less our price: in the unit of the price, as a share of the issue price, in currency for the whole trade,
-    and (in the unit of the price) for each year of expected life."""
+    """Issue price less our price: in the unit of the price, as a share of the issue price, in currency for the whole
+    trade, and (in the unit of the price) for each year of expected life."""
 
     issue_price: float
     price: float
@@ -179,8 +179,8 @@ class MarginResult(Result):
 @dataclass(frozen=True, slots=True)
 class Money(Result):
     """Where the value lies. `bond_floor` is the certain minimum of all payments on the issuer's curve, `ceiling` their
-    certain maximum; None where there is none. `parts` and `legs` add up to the price each. `funding` is what the issuer's
-    spread takes off the price, None without one."""
+    certain maximum; None where there is none. `parts` and `legs` add up to the price each. `funding` is what the
+    issuer's spread takes off the price, None without one."""
 
     bond_floor: float | None
     ceiling: float | None
@@ -193,8 +193,8 @@ class Money(Result):
 
 @dataclass(frozen=True, slots=True)
 class SolvedTerm(Result):
-    """A value of the term at which the contract is worth `target`: one entry for each, or one with `value` None. `slope` is
-    the price for 1 of the term; `together`: its other numbers move along."""
+    """A value of the term at which the contract is worth `target`: one entry for each, or one with `value` None.
+    `slope` is the price for 1 of the term; `together`: its other numbers move along."""
 
     term: str
     target: float
@@ -213,8 +213,9 @@ class SolvedTerm(Result):
 class VerifyResult(Result):
     """Whether a dealer's quote can be right: `mcx verify`.
 
-    `price` is our price at our spots, `compared` that at the spots of the quote; `mid`, `bid` and `ask` are the quote on
-    our footing. `explained`: some band holds the gap. `solve` and `target` repeat the request.
+    `price` is our price at our spots, `compared` that at the spots of the quote; `mid`, `bid` and `ask` are the quote
+    on our footing. `explained`: some band holds the gap. `leads` say what closes it: readings, and
+    single inputs inside their stated uncertainty. `solve` and `target` repeat the request.
     """
 
     contract: str
@@ -236,6 +237,7 @@ class VerifyResult(Result):
     gap: Gap
     bands: tuple[BandLine, ...]
     verdict: str
+    leads: tuple[str, ...]
     explained: bool
     inputs: tuple[InputEffect, ...]
     worst_corner: WorstCorner | None

@@ -5,10 +5,11 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator, Sequence
 
+from mcx.checked.contract import Contract
 from mcx.checked.dealer_quote import DealerQuote
 from mcx.checked.market import Market
-from mcx.estimators.levers import SHARES, Lever
-from mcx.estimators.price import Ready
+from mcx.estimators.levers import SHARES, Lever, without_lever
+from mcx.estimators.ready import Ready
 from mcx.estimators.readings import ReadingNotValued
 from mcx.estimators.roots import Solution
 from mcx.estimators.term import Solved
@@ -71,9 +72,10 @@ def verify_result(ready: Ready, market: Market, found: Verification, solve: str,
         gap=Gap(gap.value, gap.standard_error, z if math.isfinite(z) else None, gap.value * contract.size),
         bands=tuple(BandLine(band.name, band.half_width, band.holds) for band in found.bands),
         verdict=verdict(found.bands, gap.value, contract.currency if not percent else ""),
+        leads=tuple(_leads(found)),
         explained=any(band.holds for band in found.bands),
-        inputs=tuple(InputEffect(effect.lever.name, effect.lever.subject, min(filter(None, effect.lever.widths)),
-                                 effect.change.value, effect.change.standard_error, effect.note) for effect in found.effects),
+        inputs=tuple(InputEffect(each.lever.name, each.lever.subject, min(filter(None, each.lever.widths)),
+                                 each.change.value, each.change.standard_error, each.note) for each in found.effects),
         worst_corner=_corner(found),
         implied=tuple(line for implied in found.implied for line in _implied(implied)),
         joint=_joint(found.joint),
@@ -90,7 +92,7 @@ def verify_result(ready: Ready, market: Market, found: Verification, solve: str,
         target=target,
         planned=Planned(plan.asked, plan.paths, plan.pilot_paths, plan.target,
                         None if plan.target is None else price.half_width <= plan.target),
-        warnings=tuple(_warnings(found, market)),
+        warnings=tuple(_warnings(found, market, contract)),
         assumptions=tuple(dict.fromkeys((*assumptions(dated, market, ready.market), *CONVENTIONS))),
         limits=tuple(limits(dated)),
         cautions=tuple(cautions(dated, named=False)),
@@ -99,8 +101,8 @@ def verify_result(ready: Ready, market: Market, found: Verification, solve: str,
 
 
 CONVENTIONS = (
-    "input band: inputs independent and normal, each curve moving as a whole, by the half-widths that the market states",
-    "an implied input is moved alone, the whole curve by the same amount (forwards by a share), all else as the market says",
+    "input band: inputs independent and normal, each curve moving as a whole, by half-widths that the market states",
+    "an implied input is moved alone, the whole curve alike (forwards by a share), all else as the market says",
 )
 
 
@@ -115,14 +117,30 @@ def verdict(bands: Sequence[Band], gap: float, currency: str) -> str:
     return f"The gap of {size} is inside {_joined(inside, 'and')}{tail}."
 
 
+def _leads(found: Verification) -> Iterator[str]:
+    """What closes the gap by itself."""
+    if found.closing:
+        yield f"Read otherwise it would be closed: {_joined(found.closing, 'or')}."
+    elif found.readings.readings:
+        yield "None of the other readings that the definition lists closes it."
+    inside = [f"{implied.lever.name} of {implied.lever.subject}" for implied in found.implied
+              if any(implied.plausible(each) for each in implied.solutions.found)]
+    if all(implied.lever.width is None for implied in found.implied):
+        yield "No uncertainty of any input is stated: what an input would have to be cannot be called plausible or not."
+    elif inside:
+        yield f"One input inside its stated uncertainty meets the quote: {_joined(inside, 'or')}."
+    else:
+        yield "No single input meets the quote inside its stated uncertainty."
+
+
 def _joined(words: Sequence[str], joint: str) -> str:
     return words[0] if len(words) == 1 else f"{', '.join(words[:-1])} {joint} {words[-1]}"
 
 
 def _said(quote: DealerQuote) -> QuoteSaid:
     return QuoteSaid(quote.who, quote.at, quote.side, quote.unit, "clean" if quote.clean else "dirty",
-                     "firm" if quote.firm else "indicative", quote.price, quote.bid, quote.ask, quote.size, quote.source,
-                     str(quote.place))
+                     "firm" if quote.firm else "indicative", quote.price, quote.bid, quote.ask, quote.size,
+                     quote.source, str(quote.place))
 
 
 def _corner(found: Verification) -> WorstCorner | None:
@@ -141,11 +159,12 @@ def _implied(implied: Implied) -> Iterator[ImpliedInput]:
     for each in found.found:
         value = each.move if shown is None else lever.level(each.move)
         scale = shown.value if shown is not None and lever.kind in SHARES else 1.0
-        yield ImpliedInput(lever.name, lever.subject, value, each.error * scale, implied.plausible(each), measure, each.move,
-                           tenor, found.low, found.high, each.z, "")
+        yield ImpliedInput(lever.name, lever.subject, value, each.error * scale, implied.plausible(each), measure,
+                           each.move, tenor, found.low, found.high, each.z, "")
     if not found.found:
         note = NONE_THERE if found.moves_price else NO_EFFECT
-        yield ImpliedInput(lever.name, lever.subject, None, None, None, measure, None, tenor, found.low, found.high, None, note)
+        yield ImpliedInput(lever.name, lever.subject, None, None, None, measure, None, tenor, found.low, found.high,
+                           None, note)
 
 
 def _joint(joint: Joint | None) -> JointMove | None:
@@ -204,7 +223,8 @@ def _solved(solved: Solved) -> Iterator[SolvedTerm]:
 
     def line(each: Solution | None, note: str = "") -> SolvedTerm:
         numbers = (None,) * 4 if each is None else (each.move, each.error, each.slope, each.z)
-        return SolvedTerm(solved.term.name, solved.target, solved.stated, *numbers, found.low, found.high, solved.together, note)
+        return SolvedTerm(solved.term.name, solved.target, solved.stated, *numbers, found.low, found.high,
+                          solved.together, note)
 
     for each in found.found:
         yield line(each)
@@ -212,9 +232,12 @@ def _solved(solved: Solved) -> Iterator[SolvedTerm]:
         yield line(None, NONE_THERE if found.moves_price else NO_EFFECT)
 
 
-def _warnings(found: Verification, market: Market) -> Iterator[str]:
+def _warnings(found: Verification, market: Market, contract: Contract) -> Iterator[str]:
     quote = found.quote
     yield from found.valuation.plan.warnings
+    if fixed := without_lever(market, contract):
+        names = ", ".join(dict.fromkeys(f"{number.kind} of {number.subject}" for number in fixed))
+        yield f"taken as it stands, neither implied nor in the input band: {names}"
     if market.valuation is not None and quote.date != market.valuation.isoformat():
         yield f"the quote is of {quote.date}, the market of {market.valuation}: the gap holds what happened in between"
     if not quote.firm:

@@ -10,6 +10,7 @@ from mcx.report.verify_results import NO_EFFECT, NONE_THERE, ImpliedInput, Solve
 
 ANSWERS = {True: "yes", False: "no", None: ""}
 NO_NUMBER = {NONE_THERE: "", NO_EFFECT: "moves nothing"}
+LONGEST_NOTE = 240
 MOST_PAYMENTS = 12  # listed one by one; more are in --json
 IN_PERCENT = ("vol", "yield", "rates", "funding", "correlation")
 
@@ -34,40 +35,47 @@ def show_verification(result: VerifyResult, page: Page) -> None:
     places = scale.places(result.standard_error)
     quote, gap = result.quote, result.gap
     page.line(result.verdict, style="bold")
+    page.items(result.leads)
     page.named((
         ("contract", f"{result.contract} ({result.payoff})"),
         ("quote", f"{quote.dealer}, {quote.at}, {quote.side}, {quote.accrual}, {quote.commitment}"),
         ("on our footing", f"{scale.show(result.mid, places)} {scale.unit}"),
         ("our price", f"{scale.show(result.price, places)} {scale.unit}, standard error "
                       f"{scale.show(result.standard_error, places)}; valued on {result.valuation or 'time 0'}"),
-        ("gap", f"{scale.show(gap.price, places)} {scale.unit}, standard error {scale.show(gap.standard_error, places)}, "
-                f"{fixed(gap.value, 2)} {result.currency} (quote less our price)"),
+        ("gap", f"{scale.show(gap.price, places)} {scale.unit}, standard error "
+                f"{scale.show(gap.standard_error, places)}, {fixed(gap.value, 2)} {result.currency} (quote less our "
+                f"price)"),
         ("paths", f"{result.paths:,}, the page in {result.seconds:.1f} s; seed {result.seed}"),
     ))
     page.heading("the quote on our footing")
-    page.table(("step", "", "quote"), ((line.step, line.text, _footed(line.quote, line.standard_error, scale, result, number))
-                                       for number, line in enumerate(result.footing)), words=2)
+    page.table(("step", "", "quote"), (
+        (line.step, line.text, _footed(line.quote, line.standard_error, scale, result, number))
+        for number, line in enumerate(result.footing)), words=2)
     page.heading("what may hold the gap, each by itself")
     page.table(("", "half-width", "holds it"), (
         (band.name, "not stated" if band.half_width is None else scale.show(band.half_width, places),
          ANSWERS[band.holds]) for band in result.bands), last=1)
+    if gap.z is not None:
+        page.line(f"  sampling error: the gap is z = {gap.z:+.1f} standard errors")
     corner = result.worst_corner
     if corner is not None:
         far = "" if corner.share == 1.0 else f" (at {corner.share:.3g} of them: there is no such market further out)"
-        page.line(f"  worst corner, every input at the end of its half-width{far}: {scale.show(corner.price, places)} {scale.unit}, "
-                  f"which {'reaches' if corner.reaches else 'does not reach'} the quote; never the band")
+        page.line(f"  worst corner, every input at the end of its half-width{far}: {scale.show(corner.price, places)} "
+                  f"{scale.unit}, which {'reaches' if corner.reaches else 'does not reach'} the quote; never the band")
     if result.inputs:
         page.heading("what each input's half-width does to the price")
         page.table(("input", "", "half-width", scale.unit, "error", ""), (
             (each.input, each.asset, _move(each.half_width), scale.show(each.change, places),
              scale.show(each.standard_error, places), each.note) for each in result.inputs), words=2, last=1)
     page.heading("what would have to be true, each input alone")
-    page.table(("input", "", "value", "error", "move", "inside its doubt"), map(implied_row, result.implied), words=2, last=1)
+    page.table(("input", "", "value", "error", "move", "inside its doubt"), map(implied_row, result.implied), words=2,
+               last=1)
     _joint(result, page)
     _readings(result, scale, places, page)
     _money(result, scale, places, page)
     if result.solved:
-        page.heading(f"the {result.solved[0].term} at which the contract is worth {scale.show(result.solved[0].target, places)} {scale.unit}")
+        first = result.solved[0]
+        page.heading(f"the {first.term} at which the contract is worth {scale.show(first.target, places)} {scale.unit}")
         page.items(_solved(each, scale) for each in result.solved)
     for title, texts in (("warnings", result.warnings), ("assumptions", result.assumptions),
                          ("not in the model", result.limits), ("read it with care", result.cautions)):
@@ -130,11 +138,17 @@ def _readings(result: VerifyResult, scale: Scale, places: int, page: Page) -> No
     shown = [each for each in result.readings if each.price is not None and not each.note]
     page.table(("reading", scale.unit, "difference", "error", "gap left", "closes it"), (
         (each.reading, scale.show(each.price, places), scale.show(each.difference, places),
-         scale.show(each.difference_standard_error, places), scale.show(each.left, places), "yes" if each.closes_gap else "")
+         scale.show(each.difference_standard_error, places), scale.show(each.left, places),
+         "yes" if each.closes_gap else "")
         for each in shown), last=1)
     page.items(f"{each.reading}: {each.about}" for each in shown if each.closes_gap)
     unlike = [each for each in result.readings if each not in shown]
-    page.items(f"{each.reading}: {each.note}" for each in unlike)
+    page.items(f"{each.reading}: {_short(each.note)}" for each in unlike)
+
+
+def _short(note: str) -> str:
+    """A note that names many dates, cut; it stands whole in --json."""
+    return note if len(note) <= LONGEST_NOTE else f"{note[:LONGEST_NOTE].rsplit(' ', 1)[0]} … (whole in --json)"
 
 
 def _money(result: VerifyResult, scale: Scale, places: int, page: Page) -> None:
@@ -160,8 +174,8 @@ def _money(result: VerifyResult, scale: Scale, places: int, page: Page) -> None:
 
     page.table(("", scale.unit, "error"), rows())
     if margin is not None:
-        page.line(f"  the margin is {fixed(margin.value, 2)} {result.currency} for the whole trade, {100.0 * margin.share:.2f} % of "
-                  f"the issue price; expected life {result.expected_life:.2f} years")
+        page.line(f"  the margin is {fixed(margin.value, 2)} {result.currency} for the whole trade, "
+                  f"{100.0 * margin.share:.2f} % of the issue price; expected life {result.expected_life:.2f} years")
     if 0 < len(money.payments) <= MOST_PAYMENTS:
         page.table(("payment", "decided", "paid", "least", "most"), (
             (each.leg, each.decided, each.paid, "none" if each.least is None else scale.show(each.least, 2),
@@ -177,5 +191,5 @@ def _solved(each: SolvedTerm, scale: Scale) -> str:
     places = decimals(each.standard_error, 2, 4)
     slope = scale.show(0.01 * each.slope, 4)
     along = "; its other numbers move along" if each.together else ""
-    return (f"{fixed(each.value, places)} ± {fixed(each.standard_error, places)} (standard error), stated is {each.stated:.6g}; the price "
-            f"moves by {slope} {scale.unit} for 0.01 of it; {looked}{along}")
+    return (f"{fixed(each.value, places)} ± {fixed(each.standard_error, places)} (standard error), stated is "
+            f"{each.stated:.6g}; the price moves by {slope} {scale.unit} for 0.01 of it; {looked}{along}")

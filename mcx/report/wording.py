@@ -84,11 +84,11 @@ class Words:
             case None:
                 return "not stated"
             case Word(text=text):
-                return {"true": "yes", "false": "no"}.get(text, text) if term.type == "flag" else text
+                return text
             case Figures():
                 return self.figures(term, value)
             case LevelFixing(how=how):
-                return f"the level on {days(listed)}" if how == "fixing" else f"the {how} of the levels on {days(listed)}"
+                return f"the {'level' if how == 'fixing' else f'{how} of the levels'} on {days(listed)}"
             case DayRef(term=named) if named:
                 part = f".{value.part}" if value.part else ""
                 return f"{days(listed)} ({named}{part})"

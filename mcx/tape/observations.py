@@ -25,6 +25,7 @@ class Observations:
         self.history, self.builder, self.title = dated.history, builder, dated.contract.title
         self.assets = dated.contract.assets
         self.used: dict[tuple[Day, int], float] = {}  # fixings, by the day they are read for
+        self.unstated: dict[str, Fault] = {}  # watches whose past is not known, each with the last day it is read on
         self.asked: dict[LevelKey, datetime.date] = {}  # the past levels that no fixing gives
 
     def level(self, asset: int, day: Day) -> int:

@@ -72,4 +72,4 @@ def _price(dated: DatedContract, builder: Builder, makeup: Makeup) -> tuple[int,
     price = walk.outputs[0]
     alone = drop_dead_code(builder.tape([price]))
     faults = walk.faults or conflicts(alone) or unknown_laws(alone, makeup)
-    return price.value, [*faults, *walk.observations.missing(alone)]
+    return price.value, [*faults, *walk.observations.unstated.values(), *walk.observations.missing(alone)]

@@ -83,8 +83,9 @@ class Instruction:
 class Output:
     """A named result of the tape. `flag` outputs are 0 or 1 on each path.
 
-    `kind` is price, leg, part, owed, condition, end, life or level; `subject` the leg's, part's, event's or asset's name;
-    `day` the date or span of dates that a condition or an end is about ('' for all dates). The name is made of them.
+    `kind` is price, leg, part, owed, condition, end, life or level; `subject` the leg's, part's, event's or asset's
+    name; `day` the date or span of dates that a condition or an end is about ('' for all dates). The name is made of
+    them.
     """
 
     name: str

@@ -84,7 +84,7 @@ class Watched:
             self.side = watched_side(running, self.formulas)
         found = [self.start] if self.start is not None else []
         if watch.start.time < 0.0:
-            found.append((self.formulas.builder.constant(self._past(min(day, watch.end, key=_time))),))
+            found.append((self.formulas.builder.constant(self._past_or_fault(min(day, watch.end, key=_time))),))
         if day.time >= 0.0 and watch.end.time >= 0.0:
             self._extend(min(day.time, watch.end.time))
             found.append(self._formula_at(self.observations.scaled(self.side.asset, self.extreme)))
@@ -102,6 +102,15 @@ class Watched:
     def _formula_at(self, level: int) -> Values:
         scene = Scene(spot=lambda _: (level,) * len(self.formulas.contract.assets), running=_unreadable)
         return self.formulas.read(self.watch.running.formula, scene)
+
+    def _past_or_fault(self, day: Day) -> float:
+        """What is known of the past; where that is too little, the fault is noted and the walk goes on, so that all
+        that is missing is found at once."""
+        try:
+            return self._past(day)
+        except Unreadable as trouble:
+            self.observations.unstated[self.watch.running.name] = trouble.fault
+            return 0.0
 
     def _past(self, day: Day) -> float:
         """The value over the part of the watch that lies before the valuation date, up to a day."""
@@ -138,9 +147,9 @@ class Watched:
         ends = (at.name,) if isinstance(at, At) else (at.start.name, at.end.name)
         placed = [self.formulas.contract.terms[name].place for name in ends if name in self.formulas.contract.terms]
         raise Unreadable(placed[0] if placed else running.place, (
-            f"'{running.name}' is watched all the time from {self.watch.start}, which fixings cannot tell; the contract "
-            f"must say what had happened by {self._needed(day)} or {day}, as 'happened: {{{running.name}: {{{day}: "
-            f"{what}}}}}'"))
+            f"'{running.name}' is watched all the time from {self.watch.start}, which fixings cannot tell; the "
+            f"contract must say what had happened by {self._needed(day)} or {day}, as 'happened: "
+            f"{{{running.name}: {{{day}: {what}}}}}'"))
 
     def _needed(self, day: Day) -> datetime.date:
         """The earliest date of a statement that holds on a day: the day itself, or before the close of the valuation

@@ -6,6 +6,9 @@ triangular factor L of the covariance; with w = L'^-1 z the score by m is w, by 
 the drift of the first step. Of a bridge only what is read has a density: where its extreme is read by one comparison,
 whether it crossed that level, with probability exp(-2 (x0 - b)(x1 - b) / v); else the extreme itself.
 
+A level S = exp(x) + e with escrowed dividends e may be held instead of its log. Then e moves x, by -1 / exp(x), and the
+score by e is (1 + w - w') / exp(x): the 1 from dx = dS / exp(x), w of the step that ends at x, w' of the next one.
+
 Every score is appended to a tape under construction as a value, on each path.
 """
 
@@ -51,8 +54,7 @@ class Scores:
     edges      what comes on top by the log spots
     spots      the whole score by the log spot of each asset
     second     (d2 p / dx dy) / p for the log spots of each two assets, both orders; for each asset with itself. Where
-    there
-               are edges it is not complete, and would have no finite variance
+               there are edges it is not complete, and would have no finite variance
     """
 
     first: tuple[Score, ...]
@@ -61,10 +63,13 @@ class Scores:
     edges: tuple[Edge, ...] = ()
 
 
-def scores(builder: Builder, tape: Tape, grid: Grid, known: Sequence[float | None], last: int) -> Scores:
+def scores(
+    builder: Builder, tape: Tape, grid: Grid, known: Sequence[float | None], last: int, *, levels: bool = False
+) -> Scores:
     """The scores of a tape's leaves up to step `last`, appended to `builder`, which goes on where the tape ends.
 
-    known   for each value of the tape the number that it is on every path, or None (`registers.uniform_values`)
+    known    for each value of the tape the number that it is on every path, or None (`registers.uniform_values`)
+    levels   whether levels are held, not their logs, so that escrowed dividends have scores too
     """
     made = _Scores(builder, tape, grid, known)
     for number in range(1, last + 1):
@@ -72,6 +77,9 @@ def scores(builder: Builder, tape: Tape, grid: Grid, known: Sequence[float | Non
     for number, step in enumerate(tape.instructions):
         if step.op in BRIDGES and made.step_of(number) <= last:
             made.bridge(number)
+    for number, step in enumerate(tape.instructions):
+        if levels and step.op is Op.LEAF and step.payload.kind is LeafKind.ESCROW and known[number] != 0.0:
+            made.escrow(number)
     return made.all()
 
 
@@ -104,6 +112,7 @@ class _Scores:
         self.precision: dict[tuple[int, int], int] = {}  # the inverse of the first step's covariance
         self.bends: dict[int, int] = {}  # by asset: second derivatives of the log of first bridges' laws
         self.edges: list[Edge] = []
+        self.solved: dict[tuple[int, int], int] = {}  # w by the number of the step and the asset
 
     def all(self) -> Scores:
         emit = self.builder.emit
@@ -133,6 +142,7 @@ class _Scores:
         solved = dict(zip(moving, self._solved(lower, inverse, [draws[i] for i in moving]), strict=True))
         for i in moving:
             self.first.append(Score(Leaf(LeafKind.DRIFT, assets[i], **span), solved[i], number))
+            self.solved[number, assets[i]] = solved[i]
         for (i, j), leaf in factors.items():
             value = emit(Op.MUL, solved[i], draws[j])
             value = emit(Op.SUB, value, inverse[moving.index(i)]) if i == j else value
@@ -157,6 +167,20 @@ class _Scores:
             found[i] = emit(Op.MUL, total, inverse[i])
         return found
 
+    def escrow(self, number: int) -> None:
+        """The score by what is escrowed, which is added to the exponential of a log: in two parts, by their steps."""
+        emit, leaf = self.builder.emit, self.tape.instructions[number].payload
+        (level,), one = self.readers[number], self.builder.constant(1.0)
+        (stripped,) = (k for k in self.tape.instructions[level].operands if k != number)
+        assert self.tape.instructions[level].op is Op.ADD and self.tape.instructions[stripped].op is Op.EXP
+        inverse = emit(Op.DIV, one, stripped)
+        end = self.numbers[leaf.end]
+        here, following = (end, leaf.asset), (end + 1, leaf.asset)
+        if here in self.solved:
+            self.first.append(Score(leaf, emit(Op.MUL, inverse, emit(Op.ADD, one, self.solved[here])), end))
+        if following in self.solved:
+            self.first.append(Score(leaf, emit(Op.NEG, emit(Op.MUL, inverse, self.solved[following])), end + 1))
+
     def bridge(self, number: int) -> None:
         """The score of what is read of a bridge: by its variance, and by the log spot where it starts there."""
         start, _, variance, _ = self.tape.instructions[number].operands
@@ -167,8 +191,11 @@ class _Scores:
         if by_variance is None:  # nobody reads it
             return
         self.first.append(Score(leaf, by_variance, self.step_of(number)))
-        if self.tape.instructions[start].op is Op.LEAF:  # the log spot
-            asset = leaf.asset
+        if self.known[start] is None:
+            return
+        for asset in (leaf.asset, leaf.other):  # the log spot, or the sum of two: of an asset and a rate of exchange
+            if asset < 0:
+                continue
             self.spots[asset] = self.builder.emit(Op.ADD, self.spots[asset], by_start)
             if bend is None:
                 self.edges.append(self._edge(number, asset))

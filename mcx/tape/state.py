@@ -18,9 +18,9 @@ class PastEvent:
 
 
 @dataclass(frozen=True, slots=True)
-class Settled:
-    """An amount that is fixed, in the unit of the price: observed on `day`, paid on `due`. It is owed where `due` is the
-    valuation date or later."""
+class FixedAmount:
+    """An amount that is fixed, in the unit of the price: observed on `day`, paid on `due`. It is owed where `due` is
+    the valuation date or later."""
 
     pay: Pay
     day: Day
@@ -61,7 +61,7 @@ class State:
     `ended` the day on which it ended, None where it has not."""
 
     events: list[PastEvent] = field(default_factory=list)
-    payments: list[Settled] = field(default_factory=list)
+    payments: list[FixedAmount] = field(default_factory=list)
     deliveries: list[Delivery] = field(default_factory=list)
     accruing: list[Accruing] = field(default_factory=list)
     running: dict[str, tuple[float, ...]] = field(default_factory=dict)

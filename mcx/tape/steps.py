@@ -16,7 +16,7 @@ from mcx.faults import Place
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
-from mcx.tape.program import Leaf, LeafKind, LevelKey, Tape
+from mcx.tape.program import Instruction, Leaf, LeafKind, LevelKey, Tape
 
 SAME_TIME = 1e-9  # years: about 0.03 s; dates closer than that are one date, written in two ways
 
@@ -62,6 +62,8 @@ def expand_levels(tape: Tape, nodes: Sequence[float], makeup: Makeup = PLAIN) ->
             values.append(walk.level(step.payload, step.place))
         elif step.op in (Op.LOW, Op.HIGH):
             values.append(walk.extreme(step.op, step.payload, step.place))
+        elif step.op is Op.LOG and walk.is_later_level(tape.instructions[step.operands[0]]):
+            values.append(walk.log_level(tape.instructions[step.operands[0]].payload))
         else:
             values.append(walk.builder.copy(step, tuple(values[k] for k in step.operands)))
     outputs = [output.at(values[output.value]) for output in tape.outputs]
@@ -127,6 +129,17 @@ class _Walk:
         number = self.number(key.time)
         self.advance(number)
         return self._level(key.asset, number, place)
+
+    def is_later_level(self, step: Instruction) -> bool:
+        """Whether an instruction reads a level that is the exponential of a log."""
+        return (step.op is Op.LEVEL and self.number(step.payload.time) > 0
+                and step.payload.asset not in self.makeup.cash)
+
+    def log_level(self, key: LevelKey) -> int:
+        """The log that such a level is the exponential of."""
+        number = self.number(key.time)
+        self.advance(number)
+        return self._converted_log(key.asset, number)
 
     def extreme(self, op: Op, key: LevelKey, place: Place | None) -> int:
         self.advance(self.number(key.time))

@@ -7,7 +7,6 @@ Running values need no care after the contract has ended, because nothing is pai
 
 from __future__ import annotations
 
-import math
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field
 
@@ -24,7 +23,8 @@ from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Instruction, Leaf, LeafKind, LevelKey, Output, Tape
 from mcx.tape.running import FOLDS, Observed, Watched
-from mcx.tape.state import Accruing, Delivery, PastEvent, Settled, State
+from mcx.tape.shares import Shares
+from mcx.tape.state import Accruing, FixedAmount, PastEvent, State
 from mcx.tape.steps import PLAIN, Grid, Makeup, expand_levels
 from mcx.tape.watching import conflicts
 
@@ -73,7 +73,8 @@ def unroll(dated: DatedContract, *, nodes: Sequence[float], makeup: Makeup = PLA
     walk.run()
     observed = drop_dead_code(walk.builder.tape(walk.ledger.outputs()))
     missing = [] if given else walk.observations.missing(observed)
-    faults = [*(walk.faults or conflicts(observed) or unknown_laws(observed, makeup)), *missing]
+    wrong = walk.faults or conflicts(observed) or unknown_laws(observed, makeup)
+    faults = [*wrong, *walk.observations.unstated.values(), *missing]
     if faults:
         return Unrolled(Tape((), ()), Tape((), ()), Grid((0.0,), ()), {}, (), State(), tuple(sorted(set(faults))))
     if given:
@@ -332,43 +333,19 @@ class _Walk:
             self.state.accruing.append(Accruing(pay, occasion, since, fixed))
 
     def _deliver(self, action: Deliver, event: Place, day: Day, due: Day, flag: int, scene: Scene) -> None:
-        """Shares are worth their level on the delivery date. Of each note whole ones are delivered and the fraction is
-        paid in cash, at the level of the day on which it was decided, as far as their number is fixed."""
-        emit, constant, contract = self.builder.emit, self.builder.constant, self.dated.contract
-        assets = range(len(contract.assets))
-        shares = self.formulas.read(action.amount, scene)
-        chosen = self.formulas.read(action.which, scene) if action.which is not None else (constant(1.0),)
-        shares, chosen = (values if len(values) > 1 else values * len(assets) for values in (shares, chosen))
-        worth = []
-        for asset in assets:
-            if contract.conversion.get(contract.assets[asset]) == "quanto":
-                raise Unreadable(action.place, f"'{contract.assets[asset]}' is delivered: a share is worth its level at "
-                                               "the rate of exchange of the day, which 'quanto' denies")
-            taken = self._settled(chosen[asset], day)
-            number = self.formulas.fixed(shares[asset])
-            if number is not None:
-                whole = math.floor(number * contract.lot * (1.0 + 1e-12)) / contract.lot
-                if day.time <= 0.0 and self.builder.number(flag) == self.builder.number(taken) == 1.0:
-                    self.state.deliveries.append(Delivery(action, asset, day, due, whole * contract.lot,
-                                                          (number - whole) * contract.lot))
-            if due.time < 0.0:
-                continue
-            if number is None:
-                value = emit(Op.MUL, shares[asset], self.observations.level(asset, due), place=action.place)
-            else:
-                value = emit(Op.ADD, emit(Op.MUL, constant(whole), self.observations.level(asset, due)),
-                             emit(Op.MUL, constant(number - whole), self.observations.level(asset, day)))
-            worth.append(emit(Op.SELECT, taken, value, constant(0.0), place=action.place))
-        if worth:
-            amount = self.builder.fold(Op.ADD, worth, action.place)
-            self._pay(action, Payment(action.leg, action.part, event, day, due, flag, amount))
+        shares = Shares(self.dated.contract, self.formulas, self.observations)
+        worth, certain = shares.worth(action, day, due, scene, lambda chosen: self._settled(chosen, day))
+        if day.time <= 0.0 and self.builder.number(flag) == 1.0:
+            self.state.deliveries += certain
+        if worth is not None:
+            self._pay(action, Payment(action.leg, action.part, event, day, due, flag, worth))
 
     def _pay(self, pay: Pay, payment: Payment) -> None:
         emit = self.builder.emit
         past = payment.decided.time <= 0.0 and self.builder.number(payment.flag) == 1.0
         fixed = self.formulas.fixed(payment.amount) if past else None
         if fixed is not None:
-            self.state.payments.append(Settled(pay, payment.decided, payment.due, fixed))
+            self.state.payments.append(FixedAmount(pay, payment.decided, payment.due, fixed))
         if payment.due.time < 0.0:  # paid already
             return
         discount = self.builder.leaf(Leaf(LeafKind.DISCOUNT, end=payment.due.time))

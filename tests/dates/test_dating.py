@@ -588,13 +588,13 @@ def test_a_start_reads_its_terms():
 
 
 def test_events_that_never_happen_are_said():
-    """An event whose `from` lies after its last date never happens, which is an assumption worth printing."""
+    """An event whose `from` lies after its last date never happens, which is worth a warning."""
     found, faults = dated(terms="  first_call: {type: date}\n", more="  first_call: 2028-01-03\n",
                           events=PAY + "  - at: observations\n    from: first_call\n    name: called\n    "
                                        "if: spot > 1\n"
                                        "    then: [end]\n")
     assert faults == []
-    assert found.assumptions == ("'called' never happens: no date of 'observations' from 'first_call'",)
+    assert found.warnings == ("'called' never happens: no date of 'observations' from 'first_call'",)
 
 
 def test_nothing_ever_happens():

@@ -5,7 +5,9 @@ from __future__ import annotations
 from math import exp, log, sqrt
 from pathlib import Path
 
+import closed_forms as forms
 import pytest
+from greek_tools import bend, slope
 from scipy.special import ndtr
 
 import mcx
@@ -30,11 +32,11 @@ def market(asset: str, more: str = "") -> str:
     return f"---\nmarket: 0y\nrates: {{EUR: 4%, USD: 2%}}\nassets:\n  harbour: {{spot: 100, {asset}}}\n{more}"
 
 
-def greeks(tmp_path: Path, text: str, paths: int = 2**18):
+def greeks(tmp_path: Path, text: str, paths: int = 2**18, **wish: str):
     """Every sensitivity by name, asset or currency, and the result."""
     file = tmp_path / "case.yaml"
     file.write_text(text)
-    result = mcx.greeks(file, paths=paths, seed=SEED)
+    result = mcx.greeks(file, paths=paths, seed=SEED, **wish)
     return {(each.name, each.asset): each for each in result.greeks}, result
 
 
@@ -62,10 +64,62 @@ def test_call_with_cash_dividends_and_funding(tmp_path: Path):
     near(found["funding", "EUR"], -1e-4 * df * value)
 
 
+@pytest.mark.parametrize("estimator", ["pathwise", "likelihood"])
+def test_gamma_under_cash_dividends(tmp_path: Path, estimator: str):
+    """The part of the spot that the dividend is worth does not move: what is left takes the whole move of the spot."""
+    found, _ = greeks(tmp_path, HEAD + CALL + market("currency: EUR, dividends: [{ex: 0.5y, cash: 20}], vol: 20%"),
+                      estimator=estimator)
+    left = 100 - 20 * exp(-0.02)
+    _, _, by_vol = black(left * exp(0.04), 0.2)
+    near(found["gamma", "harbour"], 0.01 * 100 * exp(-0.04) * by_vol / (left * left * 0.2))
+
+
+def test_theta_under_cash_dividends(tmp_path: Path):
+    """A day on the ex date is a day nearer, as expiry is: the dividend is worth more today, the call less."""
+    found, _ = greeks(tmp_path, HEAD + CALL + market("currency: EUR, dividends: [{ex: 0.5y, cash: 20}], vol: 20%"))
+
+    def value(passed: float) -> float:
+        left, time = 100 - 20 * exp(-0.04 * (0.5 - passed)), 1.0 - passed
+        return exp(-0.04 * time) * black(left * exp(0.04 * time), 0.2, time)[0]
+
+    near(found["theta", ""], value(1 / 365) - value(0.0))
+
+
+def test_no_gamma_where_dividends_are_blended(tmp_path: Path):
+    """A share made of cash hangs on the forward, so on the spot."""
+    blend = "currency: EUR, dividends: [{ex: 0.5y, cash: 20}], dividend_blend: {cash_until: 0.1y, share_from: 0.8y}"
+    found, result = greeks(tmp_path, HEAD + CALL + market(f"{blend}, vol: 20%"))
+    assert ("gamma", "harbour") not in found and ("delta", "harbour") in found
+    assert "blended" in next(each.reason for each in result.refused if each.name == "gamma")
+
+
+@pytest.mark.parametrize("direction", ["down", "up"])
+def test_a_composite_asset_watched_continuously(tmp_path: Path, direction: str):
+    """The bridge begins at the log spot of the asset and that of the rate of exchange: delta and gamma know it. The
+    asset in the contract's currency has one vol, and the contract's rate."""
+    strike, barrier = {"down": (90.0, 85.0), "up": (80.0, 120.0)}[direction]
+    terms = (f"payoff: barrier\nterms: {{side: call, direction: {direction}, knock: out, strike: {strike}, "
+             f"barrier: {barrier}, watched: {{continuous: [0y, 1y]}}, expiry: 1y}}\n")
+    rate = "fx: {EUR per USD: {spot: 0.9, vol: 12%}}\ncorrelation: {harbour/EUR per USD: 40%}\n"
+    found, _ = greeks(tmp_path, HEAD + "conversion: {harbour: composite}\n" + terms
+                      + market("currency: USD, yield: 1%, vol: 20%", rate))
+    at = {"spot": 90.0, "maturity": 1.0, "rate": 0.04, "dividend_yield": 0.01,
+          "vol": sqrt(0.04 + 0.0144 + 2 * 0.4 * 0.2 * 0.12)}
+
+    def value(**at: float) -> float:
+        return forms.barrier_option("call", direction, "out", strike, barrier, **at)
+
+    for name, truth in (("delta", 0.9 * slope(value, at, "spot", step=1e-3)),
+                        ("gamma", 0.81 * bend(value, at, "spot", step=1e-3))):
+        assert abs(found[name, "harbour"].value - truth) < 4 * found[name, "harbour"].standard_error, name
+        assert found[name, "harbour"].standard_error < 0.15 * abs(truth), name
+
+
 def test_quanto_and_composite(tmp_path: Path):
     """Delta, and vega with the vol in drift (quanto) and in the joint variance and forward (composite)."""
     quanto = "currency: USD, yield: 1%, vol: 20%, quanto: {fx_vol: 10%, fx_correlation: 50%, fx: EUR per USD}"
-    found, _ = greeks(tmp_path, HEAD + "conversion: {harbour: quanto}\n" + CALL + market(quanto))
+    found, result = greeks(tmp_path, HEAD + "conversion: {harbour: quanto}\n" + CALL + market(quanto))
+    assert any("no sensitivities by the rate of exchange of harbour" in text for text in result.warnings)
     forward, df = 100 * exp(0.02 - 0.01 - 0.5 * 0.2 * 0.1), exp(-0.04)
     value, by_forward, by_vol = black(forward, 0.2)
     near(found["delta", "harbour"], df * by_forward * forward / 100)
@@ -83,8 +137,7 @@ def test_quanto_and_composite(tmp_path: Path):
 
 
 def test_a_jump_that_looks_at_dividends_to_come(tmp_path: Path):
-    """The delta holds against the closed form; by the rate, which moves the dividends' value under the held draws, the
-    likelihood ratio is refused with the line."""
+    """Delta, and rho, which moves the dividends' value under the level that is compared: against the closed form."""
     text = EARLY + HEAD + "payoff: early\nterms: {first: 0.5y, last: 1y}\n" + market(
         "currency: EUR, dividends: [{ex: 0.75y, cash: 20}], vol: 20%")
     found, result = greeks(tmp_path, text)
@@ -92,7 +145,22 @@ def test_a_jump_that_looks_at_dividends_to_come(tmp_path: Path):
     d2 = (log(left / strike) + 0.02) / deviation - deviation / 2
     density = exp(-d2 * d2 / 2) / sqrt(2 * 3.141592653589793)
     near(found["delta", "harbour"], 100 * exp(-0.02) * density / (left * deviation) + 1)
-    assert ("rho", "EUR") not in found
+    moved = (15 * exp(-0.03) / left - 5 * exp(-0.01) / strike + 0.5) / deviation
+    rho = 1e-4 * (100 * exp(-0.02) * (density * moved - 0.5 * ndtr(d2)) + 15 * exp(-0.03))
+    near(found["rho", "EUR"], rho)
+    assert [each.name for each in result.refused] == []
+    scored = greeks(tmp_path, text, estimator="likelihood")[0]["rho", "EUR"]
+    assert scored.estimator == "likelihood ratio", "of the level after the dividend too: both steps about the escrow"
+    assert abs(scored.value - rho) < 4 * scored.standard_error < 0.1 * rho
+
+
+def test_an_extreme_that_looks_at_dividends_to_come(tmp_path: Path):
+    """Watched continuously, the law of the extreme given levels moves with the dividends' value: refused, with the
+    line."""
+    terms = ("payoff: barrier\nterms: {side: call, direction: down, knock: out, strike: 95, barrier: 70, "
+             "watched: {continuous: [0y, 1y]}, expiry: 1y}\n")
+    found, result = greeks(tmp_path, HEAD + terms + market("currency: EUR, dividends: [{ex: 0.6y, cash: 8}], vol: 20%"))
+    assert ("rho", "EUR") not in found and ("vega", "harbour") in found
     refused = {(each.name, each.asset): each.reason for each in result.refused}
     assert "cash dividends still to come are part of a level that is compared at" in refused["rho", "EUR"]
 

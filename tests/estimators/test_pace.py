@@ -9,7 +9,7 @@ from helpers import request_of
 from mcx.dates.dating import date_contract
 from mcx.estimators.pace import LONG, announce, pace
 from mcx.estimators.plan import duration
-from mcx.estimators.price import prepare
+from mcx.estimators.ready import prepare
 from mcx.machine.sizes import cost
 from mcx.tape.program import Program
 

@@ -14,6 +14,7 @@ from mcx.estimators.plan import (
     FIRST_PILOT,
     LARGEST_PILOT,
     MOST_PATHS,
+    Independent,
     Plan,
     check_fits,
     plan,
@@ -98,8 +99,8 @@ def test_units_must_fit_the_contract():
         check_fits(relative, notional=False, title="option")
 
 
-def lognormal(paths: int) -> np.ndarray:
-    return np.random.default_rng(SEED).lognormal(0.0, 0.5, paths)
+def lognormal(paths: int) -> Independent:
+    return Independent(np.random.default_rng(SEED).lognormal(0.0, 0.5, paths))
 
 
 def test_half_width_is_reached():
@@ -117,6 +118,18 @@ def test_upper_variance_covers():
     draws = np.random.default_rng(SEED)
     low = [upper_variance(draws.normal(0.0, 3.0, 2000)) < 9.0 for _ in range(1000)]
     assert 0.005 < np.mean(low) < 0.045
+
+
+def test_means_of_points_are_planned_by_their_own_spread():
+    """32 means whose spread falls faster than the root of the paths: the pilot grows until what it asks for is near."""
+    def means(paths: int) -> Independent:
+        size = paths // 32
+        return Independent(np.random.default_rng(paths).normal(1.0, 10.0 / size, 32), size, 2.04)
+
+    planned = plan(precision(None, "0.001", None), means, never)
+    assert FIRST_PILOT < planned.pilot_paths <= planned.paths
+    assert planned.paths <= 16 * planned.pilot_paths
+    assert 2.04 * 10.0 / (planned.paths / 32) / math.sqrt(32) < 0.001
 
 
 def test_an_easy_target_still_gets_a_decent_run():
@@ -146,7 +159,7 @@ def test_an_exact_price_needs_no_pilot():
 
 def rare(every: int):
     """Prices that are 1 on every so-many-th path, else 0."""
-    return lambda paths: (np.arange(paths) % every == every - 1).astype(float)
+    return lambda paths: Independent((np.arange(paths) % every == every - 1).astype(float))
 
 
 def test_a_rare_payment_enlarges_the_pilot():

@@ -14,7 +14,8 @@ from mcx.checked.load import load
 from mcx.dates.dating import date_on
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.plan import FEWEST_PLANNED, FIRST_PILOT, precision
-from mcx.estimators.price import Ready, Valuation, prepare, value
+from mcx.estimators.price import Valuation, value
+from mcx.estimators.ready import Ready, prepare
 from mcx.machine.run import NonFinitePath, Stream, levels
 
 THOUSAND = precision(1000, None, None)
@@ -115,7 +116,7 @@ def test_pilot_and_run_share_no_path():
 @pytest.mark.parametrize("wish", [precision(None, "1%", None), precision(None, None, 0.01)])
 def test_pilots_draw_from_a_stream_of_their_own(wish, monkeypatch: pytest.MonkeyPatch):
     """Every run before the one that counts, which alone draws from the main stream."""
-    from mcx.estimators import price as module
+    from mcx.estimators.reduction import sample as module
 
     streams = []
     for name in ("run", "values_by_path"):

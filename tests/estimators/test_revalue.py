@@ -125,7 +125,7 @@ def test_a_fixing_in_between_is_taken_today_and_named():
 def test_nothing_in_between_is_not_named():
     """The day after tomorrow is not in between."""
     made, _ = ready(DATED.format(expiry="2026-12-03"))
-    assert list(between(made.dated)) == []
+    assert list(between(made.dated, made.unrolled.state)) == []
 
 
 def test_theta_of_a_watch_splits_where_curves_bend_on_either_day():

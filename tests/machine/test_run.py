@@ -15,7 +15,17 @@ from mcx.machine import jit
 from mcx.machine.blocks import sweep
 from mcx.machine.jit import COMPILED
 from mcx.machine.prepare import prepare
-from mcx.machine.run import COMPILING, NonFinitePath, NonFiniteSum, Stream, draws, levels, load_kernels, run, values_by_path
+from mcx.machine.run import (
+    COMPILING,
+    NonFinitePath,
+    NonFiniteSum,
+    Stream,
+    draws,
+    levels,
+    load_kernels,
+    run,
+    values_by_path,
+)
 from mcx.machine.sizes import batch_for, cost, lanes_for
 from mcx.tape.ops import Op
 from mcx.tape.program import ALONE, Program

@@ -21,7 +21,9 @@ EMPTY = re.compile(r"( *)([\w./]+):\s*(#.*)?")
 OPTIONAL = re.compile(r"( *)# (\w+):\s*# optional;.*")
 HEAD = {"currency": "EUR", "notional": "1000000", "units": "10", "denomination": "1000", "start": "2026-12-01", "day_count": "30/360",
         "settlement": "2 business days", "holidays": "ECB", "roll": "modified following", "market": "2026-12-01",
-        "rates": "{EUR: {1y: 2%, 3y: 2.5%}}", "funding": "{EUR: 80 bp}", "spot": "100", "yield": "2%", "vol": "20%"}
+        "rates": "{EUR: {1y: 2%, 3y: 2.5%}}", "funding": "{EUR: 80 bp}", "spot": "100", "yield": "2%", "vol": "20%",
+        "quote": "a desk", "at": "2026-12-01 16:30", "side": "bid", "unit": "cash", "price": "98", "accrual": "dirty",
+        "commitment": "firm", "bid_offer": "1", "size": "1000", "fees": "1", "issue_price": "100%", "tolerance": "0"}
 BY_TYPE = {"number": "1", "percent": "80%", "level": "100", "watch": "2028-12-01", "flag": "true", "date": "2028-12-01",
            "dates": "{from: 2027-03-01, until: 2028-12-01, every: 3 months}"}
 BY_NAME = {"strike_date": "2027-06-01", "first_call": "2027-06-01", "receive": "alder", "give": "birch",
@@ -55,14 +57,16 @@ def filled(name: str, with_optional: bool = False) -> str:
     """The blank with a value in every empty place, found from the line alone."""
     terms = {term.name: term for term in payoff_of(name).terms}
     lines = package.blank(name, assets_for(name)).splitlines()
-    done = []
+    done, money = [], any(line.startswith("units:") for line in lines)
     for line, following in zip(lines, [*lines[1:], ""], strict=True):
         if with_optional and (optional := OPTIONAL.fullmatch(line)):
-            line = f"{optional[1]}{optional[2]}: {value_for(optional[2], terms, True)}"
+            key, indent = optional[2], optional[1]
+            value = "{alder: 100}" if (key, indent) == ("spot", "") else value_for(key, terms if indent else {}, True)
+            line = f"{indent}{key}: {'100' if money and key == 'issue_price' else value}"
         elif found := EMPTY.fullmatch(line):
             indent = len(found[1])
             parent = len(following) - len(following.lstrip(" ")) > indent
-            line = line if parent else f"{found[1]}{found[2]}: {value_for(found[2], terms, with_optional)}"
+            line = line if parent else f"{found[1]}{found[2]}: {value_for(found[2], terms if indent else {}, with_optional)}"
         done.append(line)
     return "\n".join(done) + "\n"
 

@@ -19,7 +19,7 @@ from scipy.stats import norm
 import mcx as package
 from mcx.checked.load import checked_request
 from mcx.dates.dating import date_contract
-from mcx.estimators.price import Ready, prepare
+from mcx.estimators.ready import Ready, prepare
 from mcx.machine.run import values_by_path
 from mcx.report.scene import Scene, scene
 from mcx.text.documents import read_documents

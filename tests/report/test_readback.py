@@ -39,7 +39,7 @@ def test_terms_as_the_contract_writes_them():
     assert terms["initial"].value == "harbour 4210.5, lantern 812.4"
     assert terms["observations"].value == "every 3 months: 12 dates from 2027-02-16 to 2029-11-16"
     assert terms["call_barrier"].value.startswith("100 %; 100 %; 100 %; 95 %;")
-    assert (terms["memory"].value, terms["coupon"].value, terms["first_call"].value) == ("yes", "1.9 %", "2027-11-16")
+    assert (terms["memory"].value, terms["coupon"].value, terms["first_call"].value) == ("true", "1.9 %", "2027-11-16")
     assert terms["knock_in"].about == "knocked in when the worst asset is below this level"
 
 
@@ -47,7 +47,7 @@ def test_facts():
     """Currency, size, assets, start, day count, settlement, calendar."""
     (found,) = readbacks(NOTE)
     facts = {fact.name: fact.text for fact in found.facts}
-    assert facts["notional"] == "1000000 EUR; amounts are multiples of it"
+    assert facts["notional"] == "1,000,000 EUR; amounts are multiples of it"
     assert facts["assets"] == "harbour and lantern" and facts["day count"] == "30/360"
     assert facts["settlement"].startswith("2 business days after the date")
     assert re.fullmatch(r"ECB, modified following \(holidays .*\)", facts["calendar"])
@@ -66,8 +66,16 @@ def test_events_in_plain_sentences():
     assert "of observations from first_call on (2027-11-16 to 2029-11-16)" in events["called"].text
     assert events["called"].text.endswith("the contract ends: nothing later is observed or newly owed, what is already "
                                           "owed is still paid.")
+    assert found.events[2].name == "redemption"  # has no name of its own
     assert events["knocked in"].ends_here == (
         "It no longer happens on a date on which 'called' has ended the contract.",)
+
+
+def test_events_without_a_name_are_headed_by_what_they_do():
+    """By their legs, else by the values that they set."""
+    (found,) = readbacks(EXAMPLES / "range_accrual.yaml")
+    assert [event.name for event in found.events] == [
+        "days_inside and days_seen set", "coupon", "days_inside and days_seen set", "redemption"]
 
 
 def test_every_date_is_in_the_table():
@@ -104,6 +112,19 @@ def test_market_on_the_dates(tmp_path: Path):
     assert asset.forward == pytest.approx(100 * exp(0.04 - 0.015), rel=1e-14)
 
 
+def test_quotes_of_the_market(tmp_path: Path):
+    """Spots with their currency, correlations as stated, the funding spread or that there is none."""
+    quotes = {quote.name: quote.text for quote in readbacks(NOTE)[0].quotes}
+    assert quotes == {"spot of harbour": "4,180.2 EUR", "spot of lantern": "801.1 EUR",
+                      "correlation harbour/lantern": "65 %", "issuer's funding spread": "80 bp"}
+    found = package.readback(written(tmp_path, CALL + MARKET)).quotes
+    assert found[-1].text == "not stated: none is taken"
+    curve = MARKET.replace("assets:", "funding: {EUR: {1y: 80 bp, 3y: 0.95%}}\nassets:")
+    assert package.readback(written(tmp_path, CALL + curve)).quotes[-1].text == "1y 80 bp, 3y 95 bp"
+    composite = package.readback(EXAMPLES / "dividends_and_currencies.yaml").readbacks[1]
+    assert any(quote.name == "spot of EUR per CHF" for quote in composite.quotes)
+
+
 def test_vol_term_structure_on_the_dates(tmp_path: Path):
     """Black vols at the nodes are those of the market; between them total variance is linear."""
     market = MARKET.replace("vol: 22%", "vol: {6m: 20%, 1y: 30%}")
@@ -121,7 +142,7 @@ def test_vol_term_structure_on_the_dates(tmp_path: Path):
 def test_without_a_market(tmp_path: Path):
     """Everything but the market's numbers."""
     found = package.readback(written(tmp_path, CALL))
-    assert found.market == () and found.path is None and found.events
+    assert found.market == found.quotes == () and found.path is None and found.events
 
 
 @pytest.mark.parametrize(("formula", "words"), [
@@ -144,11 +165,11 @@ def test_formulas_in_words(formula: str, words: str, tmp_path: Path):
 
 
 @pytest.mark.parametrize(("running", "words"), [
-    ("average: spot", "the average of spot, so far, on 0.25y, 0.5y, 0.75y and 1y (dates)"),
+    ("average: spot", "the average of spot, so far, on 0.25y, 0.5y, 0.75y and 1y (see 'dates')"),
     ("total: spot", "the sum of spot, so far,"), ("total: 1", "1 for each date, so far,"),
     ("total: spot > 90", "how often spot is above 90, so far,"), ("lowest: spot", "the lowest spot, so far,"),
-    ("highest: spot", "the highest spot, so far,"), ("ever: spot < 90", "whether ever spot is below 90, so far,"),
-    ("always: spot >= 90", "whether always spot is at or above 90, so far,"),
+    ("highest: spot", "the highest spot, so far,"), ("ever: spot < 90", "true once spot is below 90, observed on 0.25y,"),
+    ("always: spot >= 90", "true as long as spot is at or above 90, observed on 0.25y,"),
     ("latest: spot", "the latest spot, so far,"),
     ("product: spot / 100", "the product of spot / 100, so far,"),
 ])

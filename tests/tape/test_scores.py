@@ -21,6 +21,7 @@ assets:
   harbour: {spot: 100, currency: EUR, yield: 1.5%, vol: {6m: 22%, 2y: 25%}}
   lantern: {spot: 95, currency: EUR, yield: 3%, vol: 30%}
   orchard: {spot: 90, currency: EUR, yield: 0%, vol: 28%}
+  quarry:  {spot: 90, currency: EUR, dividends: [{ex: 0.8y, cash: 9}], vol: 28%}
 correlation: {harbour/lantern: 40%, harbour/orchard: 20%, lantern/orchard: -30%}
 """
 BARRIER = document("barrier", side="put", direction="down", knock="in", strike=100, barrier=90,
@@ -28,6 +29,8 @@ BARRIER = document("barrier", side="put", direction="down", knock="in", strike=1
 LOOKBACK = document("lookback", side="call", strike_type="floating", watched="{continuous: [0y, 1y]}", expiry="1y")
 RAINBOW = document("rainbow_option", "[harbour, lantern, orchard]", side="put", strike="100%", which="worst",
                    expiry="1y", initial="{harbour: 100, lantern: 95, orchard: 90}")
+ESCROWED = document("barrier", "[quarry]", side="put", direction="down", knock="in", strike=100, barrier=90,
+                    watched="[0.3y, 0.7y]", expiry="1y")
 PATHS, SEED = 1 << 17, 0x8F1BBCDC68C4C8A1
 
 
@@ -38,7 +41,7 @@ def drawn(text: str) -> tuple[Scores, list, dict]:
     leaves = MarketMap(ready.market, ready.dated.contract)
     known = uniform_values(tape, leaves.values(tape.leaves))
     builder = Builder.of(tape)
-    found = scores(builder, tape, ready.unrolled.grid, known, len(ready.unrolled.grid.times) - 1)
+    found = scores(builder, tape, ready.unrolled.grid, known, len(ready.unrolled.grid.times) - 1, levels=True)
     made = builder.tape(tape.outputs, tape.normals, tape.uniforms)
     generator = np.random.default_rng(SEED)
     values = interpret(made, leaves.values(made.leaves), generator.standard_normal((made.normals, PATHS)),
@@ -50,7 +53,8 @@ def z(values: np.ndarray) -> float:
     return abs(values.mean()) * np.sqrt(PATHS) / values.std()
 
 
-@pytest.mark.parametrize("text", [BARRIER, LOOKBACK, RAINBOW], ids=["crossing", "extreme", "three assets"])
+@pytest.mark.parametrize("text", [BARRIER, LOOKBACK, RAINBOW, ESCROWED],
+                         ids=["crossing", "extreme", "three assets", "escrowed dividends"])
 def test_scores_have_mean_zero(text: str):
     """A density integrates to 1 whatever the leaf. By a log spot the edge of an extreme's law belongs to it."""
     found, values, _ = drawn(text)

@@ -30,6 +30,7 @@ def verify_sheet(result: VerifyResult, scene: Scene | None) -> Sheet:
         ("valued on", result.valuation or "time 0"),
         ("paths", f"{result.paths:,}; seed {result.seed}; variance reduction: {result.reduction}"))),
         *_ladder(result, scale, places)]
+    blocks += notes(("what closes it", result.leads))
     blocks += [*_implied(result), *_inputs(result, scale, places), *_readings(result, scale, places)]
     blocks += surroundings(scene, scale.unit) if scene else ()
     blocks += notes(("warnings", result.warnings), ("assumptions", result.assumptions or ("none",)))

@@ -1,0 +1,128 @@
+"""Every applicable choice of methods on one contract, each for the same time or the same number of paths.
+
+Only here does a clock have a say: it decides how many paths each choice gets, and what a path costs.
+"""
+
+from __future__ import annotations
+
+import math
+import time
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from mcx.estimators.estimate import Estimate
+from mcx.estimators.plan import FIRST_PILOT, Independent
+from mcx.estimators.reduction.catalogue import scheme_of
+from mcx.estimators.reduction.choice import CHOICES
+from mcx.estimators.reduction.sample import Sampler
+from mcx.estimators.reduction.scheme import Case, Scheme
+from mcx.faults import Refusal
+from mcx.machine.run import Stream
+
+COMPARED = (*CHOICES, ("antithetic", "sobol-bridge"), ("hedge",), ("controls", "hedge"))
+SHORTER = (64, 16, 4)  # shares of the run that the error is also noted at
+EXACT = 1e-12  # of the price: an error below is rounding
+
+
+@dataclass(frozen=True, slots=True)
+class Point:
+    """What a run of so many paths took and found."""
+
+    paths: int
+    seconds: float
+    standard_error: float
+
+
+@dataclass(frozen=True, slots=True)
+class Compared:
+    """One choice: its estimate, the time it took, its variance for a path with that variance's own relative error, and
+    shorter runs of it, the whole one last."""
+
+    scheme: Scheme
+    price: Estimate
+    seconds: float
+    doubt: float
+    points: tuple[Point, ...]
+
+    @property
+    def variance(self) -> float:
+        """Of the mean, times the paths."""
+        return self.price.standard_error**2 * self.price.paths
+
+    @property
+    def exact(self) -> bool:
+        return self.price.standard_error <= EXACT * abs(self.price.value)
+
+
+def compare(case: Case, seconds: float | None, paths: int | None) -> tuple[list[Compared], list[tuple[str, str]]]:
+    """Every choice that applies, plain sampling first, and the names of the others with the reason."""
+    found, refused = [], []
+    Sampler(scheme_of(case, ()), case.seed, case.threads, case.notice).sample(FIRST_PILOT)  # compiles, starts threads
+    for names in COMPARED:
+        try:
+            scheme = scheme_of(case, names)
+        except Refusal as reason:
+            refused.append((",".join(names), str(reason).partition(", since ")[2]))
+            continue
+        found.append(_run(case, scheme, seconds, paths))
+    return found, refused
+
+
+def _run(case: Case, scheme: Scheme, seconds: float | None, paths: int | None) -> Compared:
+    sampler = Sampler(scheme, case.seed, case.threads, case.notice)
+    if paths is None:
+        paths = sampler.within_time(_paths_for(sampler, seconds))
+    sizes = sorted({sampler.paths(max(paths // share, FIRST_PILOT // 4)) for share in SHORTER} | {sampler.paths(paths)})
+    points = []
+    for size in (size for size in sizes if size <= sampler.paths(paths)):
+        begun = time.perf_counter()
+        (price,) = sampler.sample(size, first_output_only=True).results
+        points.append(Point(size, time.perf_counter() - begun, price.standard_error))
+    return Compared(scheme, price, points[-1].seconds, _doubt(sampler.independent(FIRST_PILOT)), tuple(points))
+
+
+def _paths_for(sampler: Sampler, seconds: float) -> int:
+    """The paths that a time allows."""
+    paths, taken = FIRST_PILOT, 0.0
+    for _ in range(12):
+        begun = time.perf_counter()
+        sampler.sample(paths, stream=Stream.PILOT, first_output_only=True)
+        taken = time.perf_counter() - begun
+        if taken > 0.1 * seconds:
+            break
+        paths *= 4
+    return int(paths * min(seconds / max(taken, 1e-6), 16.0))
+
+
+def _doubt(found: Independent) -> float:
+    """The relative standard error of a variance: from the fourth moment of many means; by the chi-squared law for the
+    means of a few scrambles."""
+    values = found.values - found.values.mean()
+    variance = float((values**2).mean())
+    if len(values) < 100:
+        return math.sqrt(2.0 / (len(values) - 1))
+    if variance == 0.0:
+        return 0.0
+    return math.sqrt(max(float((values**4).mean()) / variance**2 - 1.0, 0.0) / len(values))
+
+
+def closed_form(found: Sequence[Compared]) -> float | None:
+    """The value where a choice is exact: its controls are the contract, and their mean is a closed form."""
+    return next((each.price.value for each in found if each.exact), None)
+
+
+def z_scores(found: Sequence[Compared]) -> Iterator[float]:
+    """The distance of each estimate from all others pooled by their variances, in standard errors."""
+    values = np.array([each.price.value for each in found])
+    least = EXACT * np.maximum(np.abs(values), 1e-300)
+    weights = 1.0 / np.maximum([each.price.standard_error for each in found], least) ** 2
+    for number, each in enumerate(found):
+        others = np.arange(len(found)) != number
+        if not others.any():
+            yield 0.0
+            continue
+        pooled = float((values * weights)[others].sum() / weights[others].sum())
+        error = math.sqrt(max(each.price.standard_error, least[number]) ** 2 + 1.0 / float(weights[others].sum()))
+        yield (each.price.value - pooled) / error

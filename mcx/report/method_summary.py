@@ -1,0 +1,62 @@
+"""From the comparison of methods to the result of `mcx methods`."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+
+from mcx.estimators.ready import Ready
+from mcx.estimators.reduction.comparison import Compared, closed_form, z_scores
+from mcx.report.cautions import cautions, limits
+from mcx.report.method_results import Convergence, MethodLine, MethodsResult, NotApplied
+
+BASIS_POINT = 1e-4
+
+
+def methods_result(ready: Ready, found: Sequence[Compared], refused: Sequence[tuple[str, str]], seed: int,
+                   each: str) -> MethodsResult:
+    """Every choice, the most efficient first; an exact one before all."""
+    contract = ready.dated.contract
+    truth = closed_form(found)
+    plain = found[0]
+    unit = BASIS_POINT * (1.0 if contract.notional is not None else abs(plain.price.value))
+    lines = [_line(one, plain, z, truth, unit) for one, z in zip(found, z_scores(found), strict=True)]
+    lines.sort(key=lambda line: -math.inf if line.efficiency is None else -line.efficiency)
+    return MethodsResult(
+        contract=contract.title,
+        payoff=contract.payoff.name,
+        currency=contract.currency,
+        notional=contract.notional,
+        unit="notional" if contract.notional is not None else "currency per unit",
+        seed=seed,
+        each=each,
+        closed_form=truth,
+        methods=tuple(lines),
+        not_applied=tuple(NotApplied(*one) for one in refused),
+        limits=tuple(limits(ready.dated)),
+        cautions=tuple(cautions(ready.dated, named=False)),
+    )
+
+
+def _line(one: Compared, plain: Compared, z: float, truth: float | None, unit: float) -> MethodLine:
+    cost = (one.seconds / one.price.paths) / (plain.seconds / plain.price.paths)
+    ratio = None if one.exact else plain.variance / one.variance
+    itself = one is plain
+    wanted = (one.price.half_width / unit) ** 2 if unit else 0.0
+    return MethodLine(
+        method=one.scheme.label,
+        price=one.price.value,
+        standard_error=one.price.standard_error,
+        paths=one.price.paths,
+        seconds=one.seconds,
+        variance_ratio=ratio,
+        variance_ratio_error=None if ratio is None else 0.0 if itself else ratio * math.hypot(one.doubt, plain.doubt),
+        cost_ratio=cost,
+        efficiency=None if ratio is None else ratio / cost,
+        z=z,
+        z_closed_form=None if truth is None else 0.0 if one.exact else one.price.z(truth),
+        paths_to_1bp=wanted * one.price.paths,
+        seconds_to_1bp=wanted * one.seconds,
+        notes=one.scheme.notes,
+        convergence=tuple(Convergence(point.paths, point.seconds, point.standard_error) for point in one.points),
+    )

@@ -1,0 +1,162 @@
+"""The parts of variance reduction: names, coefficients, mirrors, weights, strata, the choice."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import replace
+
+import numpy as np
+import pytest
+from test_laws import CURVED, FLAT, made
+
+from mcx.estimators.plan import precision
+from mcx.estimators.price import value
+from mcx.estimators.reduction.antithetic import paired
+from mcx.estimators.reduction.catalogue import conflict, scheme_of
+from mcx.estimators.reduction.choice import CHOICES, best
+from mcx.estimators.reduction.fit import Costs, chosen_controls, coefficients
+from mcx.estimators.reduction.importance import mode, shifted
+from mcx.estimators.reduction.names import NAMES, wished
+from mcx.estimators.reduction.sample import Sampler
+from mcx.estimators.reduction.scheme import Case, Control
+from mcx.faults import Refusal, RequestError
+from mcx.machine.draw_plan import DrawPlan
+from mcx.machine.run import draws
+from mcx.tape.interpret import interpret
+
+SEED = 0x510E527FADE682D1
+
+
+@pytest.mark.parametrize(("asked", "names"), [
+    ("none", ()), ("auto", ("auto",)), ("antithetic", ("antithetic",)),
+    (" sobol-bridge, controls", ("controls", "sobol-bridge")), (["antithetic", "controls"], ("controls", "antithetic"))])
+def test_names_are_put_in_order(asked: object, names: tuple):
+    assert wished(asked) == names
+
+
+@pytest.mark.parametrize("asked", ["", "sobol", "none,antithetic", "auto,controls", "controls,controls", None, 3, [], [1]])
+def test_other_names_are_refused(asked: object):
+    with pytest.raises(RequestError):
+        wished(asked)
+
+
+def test_two_sources_of_draws_conflict():
+    """Said before anything runs."""
+    assert "cannot go together" in conflict(("sobol-bridge", "sobol-components"))
+    assert not conflict(("controls", "antithetic", "stratified"))
+    with pytest.raises(RequestError, match="one source"):
+        scheme_of(Case(made("digital", FLAT), SEED), ("stratified", "sobol-bridge"))
+
+
+def test_coefficients_of_nearly_equal_controls_stay_small():
+    """Three copies of one control, but for 1e-9, share its coefficient."""
+    rng = np.random.default_rng(SEED)
+    x, noise = rng.normal(size=4000), rng.normal(size=(4000, 3))
+    controls = x[:, None] + 1e-9 * noise
+    target = 2.0 * x + 0.1 * rng.normal(size=4000)
+    found = coefficients(target[:, None], controls)
+    assert np.abs(found).max() < 2.1 and found.sum() == pytest.approx(2.0, abs=0.01)
+
+
+def test_controls_are_chosen_by_variance_times_cost():
+    """Of a good cheap, the same but dearer, and a useless control the first; those that must come in any case."""
+    rng = np.random.default_rng(SEED)
+    x, other = rng.normal(size=4000), rng.normal(size=4000)
+    target = x + 0.1 * rng.normal(size=4000)
+    candidates = np.stack([other, x, x + 1e-3 * other, np.full(4000, 2.0)], axis=1)
+    needs = np.array([[True, False], [False, False], [False, True], [False, False]])
+    costs = Costs(10.0, 0.3, np.array([50.0, 50.0]), needs)
+    controls = tuple(Control(str(k), 0.0) for k in range(4))
+    assert chosen_controls(target, candidates, controls, costs).tolist() == [1]
+    must = tuple(replace(control, must=control.name in "03") for control in controls)  # the constant cannot
+    assert chosen_controls(target, candidates, must, costs).tolist() == [0, 1]
+    assert chosen_controls(rng.normal(size=4000), candidates, controls, costs).tolist() == []
+
+
+@pytest.mark.parametrize("name", ["average", "barrier", "exchange", "lookback strike"])
+def test_a_pair_is_a_path_and_its_mirror(name: str):
+    """Each output on each pair of draws: the mean of the tape on z and on -z, on u and on 1 - u."""
+    ready = made(name, CURVED)
+    tape = ready.unrolled.tape
+    rng = np.random.default_rng(SEED)
+    z, u = rng.normal(size=(tape.normals, 50)), rng.uniform(size=(tape.uniforms, 50))
+    leaves = ready.market.values(tape.leaves)
+    sides = [interpret(tape, leaves, s * z, 0.5 + s * (u - 0.5)) for s in (1.0, -1.0)]
+    pair = paired(tape)
+    found = interpret(pair, ready.market.values(pair.leaves), z, u)
+    for one, output in zip(tape.outputs, pair.outputs, strict=True):
+        np.testing.assert_allclose(found[output.value], 0.5 * (sides[0][one.value] + sides[1][one.value]), rtol=1e-9)
+
+
+def test_a_shift_carries_its_weight():
+    """Each output of the shifted tape at z: that of the tape at z + shift, times the ratio of the densities."""
+    ready = made("barrier", CURVED)
+    tape = ready.unrolled.tape
+    rng = np.random.default_rng(SEED)
+    z, shift = rng.normal(size=(tape.normals, 50)), rng.normal(size=tape.normals)
+    moved, weight = shifted(tape, shift)
+    there = z + shift[:, None]
+    ratio = np.exp(-0.5 * (there**2).sum(axis=0) + 0.5 * (z**2).sum(axis=0))
+    found = interpret(moved, ready.market.values(moved.leaves), z)
+    plain = interpret(tape, ready.market.values(tape.leaves), there)
+    np.testing.assert_allclose(found[weight], ratio, rtol=1e-9)
+    for one, output in zip(tape.outputs, moved.outputs, strict=True):
+        np.testing.assert_allclose(found[output.value], plain[one.value] * ratio, rtol=1e-9, atol=1e-13)
+
+
+def test_the_mode_of_a_digital_is_its_edge():
+    """Paid below 104, all the density on the near side: the mode is the mean, and importance has nothing to offer; paid
+    below 40, it is the edge itself."""
+    with pytest.raises(Refusal, match="pays most where paths are drawn anyway"):
+        scheme_of(Case(made("digital", FLAT), SEED), ("importance",))
+    far = made("digital", FLAT.replace("spot: 100", "spot: 260"))
+    edge = (math.log(104.0 / 260.0) - (0.04 - 0.015 - 0.5 * 0.22**2)) / 0.22
+    assert mode(Case(far, SEED))[0] == pytest.approx(edge, abs=0.06)
+
+
+def test_strata_share_out_the_end_of_a_path():
+    """Of the 64 paths of a group one is in each part of equal probability; other normals are untouched."""
+    ready = made("average", FLAT)
+    program = ready.program
+    plain, strata = (draws(program, seed=SEED, numbers=range(640), plan=DrawPlan(strata=s)) for s in (0, 64))
+    from scipy.special import ndtr
+
+    parts = np.floor(64 * ndtr(strata[:, 0])).astype(int).reshape(-1, 64)
+    assert (np.sort(parts, axis=1) == np.arange(64)).all()
+    np.testing.assert_array_equal(plain[:, 1:], strata[:, 1:])
+
+
+def test_the_choice_beats_plain_sampling_and_is_always_the_same():
+    """For an average; two threads choose as one does, and the named methods give the same digits as the choice."""
+    ready = made("average", FLAT)
+    scheme = best(Case(ready, SEED, 1))
+    assert scheme.names in CHOICES and "controls" in scheme.names
+    assert scheme.names == best(Case(ready, SEED, 2)).names
+    asked = precision(20_000, None, None)
+    chosen, named, plain = (value(ready, asked, seed=SEED, reduction=names) for names in (("auto",), scheme.names, ()))
+    assert chosen.results == named.results
+    assert chosen.price.standard_error < 0.03 * plain.price.standard_error
+    assert abs(chosen.price.value - plain.price.value) < 4 * plain.price.standard_error
+
+
+@pytest.mark.parametrize("reduction", ["none", "controls", "antithetic", "sobol-bridge", "stratified"])
+def test_half_widths_are_planned_with_a_method(reduction: str):
+    """The precision asked for is reached, by a method in fewer paths than without."""
+    ready = made("lookback", FLAT)
+    found = value(ready, precision(None, "0.05", None), seed=SEED, reduction=wished(reduction))
+    plain = value(ready, precision(None, "0.05", None), seed=SEED)
+    assert found.price.half_width <= 0.05
+    assert found.price.paths <= plain.price.paths
+
+
+@pytest.mark.parametrize("names", [(name,) for name in NAMES])
+def test_odd_numbers_of_paths_become_whole(names: tuple):
+    """The number that was run asks for itself again, so that a record replays."""
+    ready = made("average", FLAT)
+    try:
+        sampler = Sampler(scheme_of(Case(ready, SEED), names), SEED)
+    except Refusal:
+        pytest.skip("does not apply")
+    for wanted in (2049, 5000, 12_345):
+        found = sampler.paths(wanted)
+        assert found >= wanted and sampler.paths(found) == found == sampler.sample(wanted).results[0].paths
