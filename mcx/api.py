@@ -630,5 +630,5 @@ def _reduction(reduction: str) -> None:
     from mcx.estimators.reduction.names import wished
 
     if wished(reduction):
-        raise RequestError(f"the variance reduction of sensitivities is 'none', not {reduction!r}: their estimators choose "
-                           f"their own controls")
+        raise RequestError(f"the variance reduction of sensitivities is 'none', not {reduction!r}: their estimators "
+                           f"choose their own controls")

@@ -49,7 +49,8 @@ class Whole(click.ParamType):
 def sampling(command: Callable) -> Callable:
     """The options that mean the same on every command that draws paths."""
     for option in (
-        click.option("--reduction", default="none", metavar="A,B,…", help="Variance reduction: none, auto, or methods.  [none]"),
+        click.option("--reduction", default="none", metavar="A,B,…",
+                     help="Variance reduction: none, auto, or methods.  [none]"),
         THREADS,
         click.option("--seed", type=int, help="Seed of the random numbers.  [1]"),
         click.option("--seconds", type=float, help="As many paths as this time allows, by a pilot run."),

@@ -15,7 +15,9 @@ from helpers import check, prepare
 from scipy.special import ndtr
 
 import mcx as package
+from mcx.dates.dating import date_contract
 from mcx.faults import InputError
+from mcx.tape.unroll import unroll
 
 SEED = 20261201
 WORST_OF = """contract: note
@@ -489,3 +491,10 @@ def test_what_must_be_stated_and_what_must_be_fixed_is_told_at_once(tmp_path: Pa
     assert any("must say what had happened by 2027-05-31 or 2027-06-01" in each for each in found)
     path = written(tmp_path, "harbour: {2027-03-01: 90, 2027-05-03: 88, 2027-12-01: 95}\n", "path.yaml")
     refused(mcx("readback", written(tmp_path, text), "--path", path), "must say what had happened by 2027-05-31")
+
+
+def test_without_a_market_for_its_past_a_contract_says_what_it_needs():
+    """A contract that is dated without history asks for its fixings at its own place."""
+    contract = prepare(WORST_OF + market() + fixings(LEVELS)).dated.contract
+    dated, _ = date_contract(contract, date(2027, 9, 15))
+    assert [fault.place for fault in unroll(dated, nodes=()).faults] == [contract.place] * 2

@@ -17,7 +17,7 @@ from helpers import request_of
 from scipy.optimize import brentq
 
 from mcx.checked.dealer_quote import DealerQuote
-from mcx.dates.dating import date_contract
+from mcx.dates.dating import date_on
 from mcx.estimators.bands import root_of_squares
 from mcx.estimators.batches import Sampling
 from mcx.estimators.estimate import Estimate
@@ -25,7 +25,7 @@ from mcx.estimators.levers import Lever
 from mcx.estimators.plan import Precision
 from mcx.estimators.price import prepare
 from mcx.estimators.readings import value_readings
-from mcx.estimators.roots import solutions
+from mcx.estimators.roots import SCANNED, solutions
 from mcx.estimators.verify import Bench
 from mcx.faults import Place
 from mcx.leaves.jacobian import moved
@@ -48,7 +48,7 @@ def bench_of(request, number: int = 0, paths: int = PATHS, seed: int = SEED, unc
     if uncertainty is not None:
         quoted = next(iter(market.assets.values())).spot
         market = replace(market, uncertainty={key: replace(quoted, value=width) for key, width in uncertainty.items()})
-    dated, faults = date_contract(request.contracts[number], market.valuation)
+    dated, faults = date_on(request.contracts[number], market)
     ready, refused = prepare(dated, market)
     assert not faults and not refused
     return Bench(ready, market, Precision(paths=paths), seed=seed)
@@ -270,3 +270,21 @@ def test_a_term_is_solved():
     assert abs(there.value - 1.0) < 4.0 * math.hypot(there.standard_error, each.error * each.slope)
     years = ours.ready.dated  # the coupon's slope is the annuity, known without simulation
     assert each.slope == pytest.approx(sum(1.0 for _ in years.schedules["coupon_dates"]) / 4, rel=0.1)
+
+
+def test_more_paths_may_move_a_solution_out_of_its_stretch():
+    """What the first paths find at 0.05, all of them find several steps of the scan away; and only once."""
+    def distance(move: float, sampling: Sampling) -> Estimate:
+        return Estimate(move - (0.05 if sampling.paths <= SCANNED else 0.47), 0.1, sampling.paths)
+
+    found = solutions(distance, -1.0, 1.0, Sampling(1, 2 * SCANNED)).found
+    assert [each.move for each in found] == pytest.approx([0.47], abs=1e-8)
+
+
+def test_a_solution_near_the_end_of_the_range_that_only_all_paths_see():
+    """The first paths would have it just outside."""
+    def distance(move: float, sampling: Sampling) -> Estimate:
+        return Estimate(move - (1.02 if sampling.paths <= SCANNED else 0.97), 0.1, sampling.paths)
+
+    found = solutions(distance, -1.0, 1.0, Sampling(1, 2 * SCANNED)).found
+    assert [each.move for each in found] == pytest.approx([0.97], abs=1e-8)

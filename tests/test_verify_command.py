@@ -141,7 +141,7 @@ def test_several_quotes_are_ranked(tmp_path: Path):
         (1, "Northgate desk", pytest.approx(10.2)), (2, "Saltmarsh desk", 10.0)]
     price = found["quotes"][0]["price"]
     for each in found["ranking"]:  # what is paid after a year is discounted with the spread
-        assert each["funding"] == pytest.approx(0.005 - log(each["mid"] / price), abs=1e-8)
+        assert each["funding"] == pytest.approx(0.005 - log(each["mid"] / price), abs=1e-6)
     assert outcome.code == 1
     assert "on one footing, the highest first" in mcx("verify", quoted(tmp_path, one + other, market), *ASKED).out
 

@@ -50,7 +50,8 @@ class History:
 
     def missing(self, asset: int, date: datetime.date) -> list[str]:
         """What of the market has no fixing on a date: the asset, its rate of exchange."""
-        return [name for name in self.names[asset] if date not in self.published.get(name, {})]
+        names = self.names[asset] if self.names else ()
+        return [name for name in names if date not in self.published.get(name, {})]
 
     def extremes(self, asset: int, start: Day, end: Day) -> tuple[float, float] | None:
         """The lowest and the highest fixing of an asset from one day to another, both included; None without any."""

@@ -266,12 +266,6 @@ class _Run:
                    f"likelihood ratio's delta grows as the root of that time shrinks, that of its gamma as the time "
                    f"itself does; a ladder of spot moves says more")
 
-    def _unmoved(self) -> Iterator[str]:
-        """A word about numbers of the market that the value hangs on and that have no line."""
-        for name, how in self.contract.conversion.items():
-            numbers = "spot, vol and correlation" if how == "composite" else "vol and correlation"
-            yield f"no sensitivities by the rate of exchange of {name} ({how}): its {numbers} stand where they are"
-
     def _turning(self) -> Iterator[str]:
         """A word about conditions on today's levels that a small move of the spots turns."""
         here, *there = (today(self.revaluer.tape, moved(self.market, spot_shifts(self._moving(), move)), self.contract)

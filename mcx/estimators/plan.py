@@ -162,8 +162,8 @@ def _by_half_width(asked: Precision, pilot: Callable[[int], Independent], pace: 
     warnings, wanted = [], _wanted(asked, found)
     if _few(found):
         warnings.append(f"of {len(found.values):,} {'pilot paths' if found.size == 1 else 'means of pilot paths'} only "
-                        f"{unlike(found.values)} differed from the rest: the number of paths for the precision asked for "
-                        f"cannot be planned well")
+                        f"{unlike(found.values)} differed from the rest: the number of paths for the precision asked "
+                        f"for cannot be planned well")
         wanted = max(wanted, found.paths)
     if wanted > MOST_PATHS:
         raise RequestError(_out_of_reach(asked, wanted, pace))

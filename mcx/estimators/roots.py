@@ -20,6 +20,7 @@ from mcx.machine.run import Stream
 
 POINTS = 16  # steps of the scan
 SCANNED = 1 << 16  # paths of the scan
+SAME = 1e-6  # of the range: one solution found twice
 CLOSE, NEAR = 1e-10, 1e-4  # of the range: where a solution is found well enough, on all paths and on the first ones
 OF_ERROR = 3e-4  # or this share of its error: a price with jumps has no closer solution
 DOUBT = 4.0  # errors of the first paths within which a turn may cross 0 on all of them
@@ -81,11 +82,11 @@ def solutions(
     if np.ptp(values) == 0.0:
         return Solutions((), low, high, moves_price=False)
     found = []
-    for left, right in _brackets(grid, values, first, whole):
-        root = _refined(left, right, first, whole, high - low)
-        if root is not None:
+    for left, right in (*_brackets(grid, values, first, whole), *_at_the_ends(grid, values, first, whole)):
+        root = _refined((left, right), (low, high), first, whole)
+        if root is not None and all(abs(root[0] - other.move) > SAME * (high - low) for other in found):
             found.append(_solution(*root, distance, whole))
-    return Solutions(tuple(found), low, high)
+    return Solutions(tuple(sorted(found, key=lambda each: each.move)), low, high)
 
 
 def _edge(possible: Callable[[float], bool], end: float) -> float:
@@ -117,17 +118,32 @@ def _brackets(grid: np.ndarray, values: np.ndarray, at: _Points, whole: _Points)
                 yield float(turn.x), float(grid[number + 1])
 
 
-def _refined(left: float, right: float, first: _Points, whole: _Points, span: float) -> tuple[float, float] | None:
-    """The solution on all paths in a stretch where the first ones have one, and the slope there on the first ones; None
-    where all paths have no solution. It is looked for within a few errors of the first paths' one, then further off."""
+def _at_the_ends(
+    grid: np.ndarray, values: np.ndarray, at: _Points, whole: _Points
+) -> Iterator[tuple[float, float]]:
+    """The outermost stretches where only all paths see the sign change before the range ends."""
+    for end, next_to_it in ((0, 1), (-1, -2)):
+        near = abs(values[end]) < DOUBT * at.estimate(grid[end]).standard_error
+        if near and values[end] * values[next_to_it] > 0.0 and values[end] * whole(grid[end]) < 0.0:
+            yield tuple(sorted((float(grid[end]), float(grid[next_to_it]))))
+
+
+def _refined(
+    stretch: tuple[float, float], ends_of_all: tuple[float, float], first: _Points, whole: _Points
+) -> tuple[float, float] | None:
+    """The solution on all paths near a stretch where the first ones have one, and the slope there on the first ones;
+    None where all paths have no solution. It is looked for within a few errors of the first paths' one, then in the
+    whole stretch, and then beyond, since more paths may have moved it out."""
+    (left, right), span = stretch, ends_of_all[1] - ends_of_all[0]
     ends = first(left), first(right)
     near = brentq(first, left, right, xtol=NEAR * span) if ends[0] * ends[1] < 0.0 else \
         left if ends[0] == 0.0 else right if ends[1] == 0.0 else 0.5 * (left + right)
     slope = _slope(first, near, span)
     reach = DOUBT * first.estimate(near).standard_error / abs(slope) if slope else span
     reach, last = max(reach, 2.0 * NEAR * span), False
+    within = stretch
     while not last:
-        a, b = max(near - reach, left), min(near + reach, right)
+        a, b = max(near - reach, within[0]), min(near + reach, within[1])
         if whole(a) * whole(b) <= 0.0:
             if a == b:
                 return a, slope
@@ -135,7 +151,9 @@ def _refined(left: float, right: float, first: _Points, whole: _Points, span: fl
             error = whole.estimate(a).standard_error * (b - a) / rise if rise else 0.0
             move = float(brentq(whole, a, b, xtol=max(CLOSE * span, OF_ERROR * error), rtol=1e-14))
             return move, _slope(first, move, span)
-        last, reach = (a, b) == (left, right), 6.0 * reach
+        last, reach = (a, b) == ends_of_all, 3.0 * reach
+        if within is stretch and (a, b) == stretch:
+            within, reach = ends_of_all, right - left
     return None
 
 

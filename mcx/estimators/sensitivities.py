@@ -4,9 +4,9 @@ numbers.
 delta per 1 of spot, and for a move of 1 % as percent of the notional; vega and correlation per point (1 %); rho, yield
 and funding per basis point of a zero rate; forwards per 1; dividends per 1 of cash or per basis point of the level, a
 decrement per basis point or point a year; a rate of exchange per 1, its vol and correlations per point. Everything but
-the second delta is in the contract's currency for the whole notional or number of units. Where a curve has several nodes
-there is one line for each and one for all of them together, whose value is their sum. Gamma is the change of delta (per 1
-of spot) for a move of the spot by 1 %.
+the second delta is in the contract's currency for the whole notional or number of units. Where a curve has several
+nodes there is one line for each and one for all of them together, whose value is their sum. Gamma is the change of
+delta (per 1 of spot) for a move of the spot by 1 %.
 """
 
 from __future__ import annotations

@@ -44,8 +44,9 @@ def _levels(term: Term, value: Figures, dated: DatedContract, market: MarketMap)
     """Levels far from today's; a level of 1 makes a performance the level itself and is none of them."""
     if term.type != "level":
         return
+    scale = dated.history.scale or (1.0,) * len(dated.contract.assets)  # as adjusted since the start
     for number, asset in enumerate(dated.contract.assets):
-        today = market.forward(asset, 0.0)
+        today = market.forward(asset, 0.0) * scale[number]
         for row in value.rows:
             level = row[number if value.per_asset else 0]
             if level > 0.0 and level != 1.0 and not LEVELS[0] <= today / level <= LEVELS[1]:

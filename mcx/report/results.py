@@ -152,8 +152,8 @@ class Planned(Result):
 
 @dataclass(frozen=True, slots=True)
 class HedgeLine(Result):
-    """What a hedger is left with who trades on `dates` dates, today included (0: without a hedge): the standard deviation
-    of the discounted value less the hedge's gains, in the unit of the price, and its standard error."""
+    """What a hedger is left with who trades on `dates` dates, today included (0: without a hedge): the standard
+    deviation of the discounted value less the hedge's gains, in the unit of the price, and its standard error."""
 
     dates: int
     deviation: float

@@ -23,6 +23,7 @@ class Observations:
 
     def __init__(self, dated: DatedContract, builder: Builder):
         self.history, self.builder, self.title = dated.history, builder, dated.contract.title
+        self.place = dated.history.place or dated.contract.place
         self.assets = dated.contract.assets
         self.used: dict[tuple[Day, int], float] = {}  # fixings, by the day they are read for
         self.unstated: dict[str, Fault] = {}  # watches whose past is not known, each with the last day it is read on
@@ -57,7 +58,7 @@ class Observations:
                 date = self.asked[step.payload]
                 for name in self.history.missing(step.payload.asset, date) or [self.assets[step.payload.asset]]:
                     lacking.setdefault(name, set()).add(date)
-        return [Fault(self.history.place, f"'{self.title}' needs a fixing of '{name}' on {_listed(sorted(dates))}")
+        return [Fault(self.place, f"'{self.title}' needs a fixing of '{name}' on {_listed(sorted(dates))}")
                 for name, dates in lacking.items()]
 
 

@@ -118,8 +118,7 @@ def test_a_composite_asset_watched_continuously(tmp_path: Path, direction: str):
 def test_quanto_and_composite(tmp_path: Path):
     """Delta, and vega with the vol in drift (quanto) and in the joint variance and forward (composite)."""
     quanto = "currency: USD, yield: 1%, vol: 20%, quanto: {fx_vol: 10%, fx_correlation: 50%, fx: EUR per USD}"
-    found, result = greeks(tmp_path, HEAD + "conversion: {harbour: quanto}\n" + CALL + market(quanto))
-    assert any("no sensitivities by the rate of exchange of harbour" in text for text in result.warnings)
+    found, _ = greeks(tmp_path, HEAD + "conversion: {harbour: quanto}\n" + CALL + market(quanto))
     forward, df = 100 * exp(0.02 - 0.01 - 0.5 * 0.2 * 0.1), exp(-0.04)
     value, by_forward, by_vol = black(forward, 0.2)
     near(found["delta", "harbour"], df * by_forward * forward / 100)

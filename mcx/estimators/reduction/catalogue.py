@@ -14,6 +14,7 @@ from mcx.estimators.reduction.points import BRIDGE, COMPONENTS
 from mcx.estimators.reduction.scheme import Case, Draft, Inapplicable, Method, Scheme, Stage
 from mcx.estimators.reduction.stratified import STRATIFIED
 from mcx.faults import Refusal, RequestError
+from mcx.tape.program import Tape
 
 METHODS: tuple[Method, ...] = (CONTROLS, HEDGE, IMPORTANCE, ANTITHETIC, STRATIFIED, BRIDGE, COMPONENTS)
 BY_NAME = {method.name: method for method in METHODS}
@@ -28,26 +29,41 @@ def conflict(names: Sequence[str]) -> str:
     return ""
 
 
-def scheme_of(case: Case, names: Sequence[str]) -> Scheme:
+def scheme_of(case: Case, names: Sequence[str], known: dict[tuple[str, ...], Scheme] | None = None) -> Scheme:
     """The contract as these methods sample it. Raises RequestError for methods that cannot go together and Refusal for
-    one that does not apply to this contract, with the reason."""
-    if not names:
-        return Scheme((), case.ready.program)
+    one that does not apply to this contract, with the reason.
+
+    How draws are made has no part in the coefficients of controls, so that what differs in nothing else is fitted once:
+    it is kept in `known` where that is given.
+    """
     if why := conflict(names):
         raise RequestError(why)
-    methods = [BY_NAME[name] for name in names]
+    known = {} if known is None else known
+    fitting = tuple(name for name in names if BY_NAME[name].stage is not Stage.DRAWS)
+    if fitting not in known:
+        known[fitting] = _fitted(case, fitting)
+    scheme = known[fitting]
+    draft = Draft(Tape((), (), scheme.program.normals, scheme.program.uniforms))
+    for name in names:
+        if name not in fitting:
+            draft = _changed(BY_NAME[name], case, draft)
+    return replace(scheme, names=tuple(names), plan=draft.plan)
+
+
+def _fitted(case: Case, names: tuple[str, ...]) -> Scheme:
+    """The tape as these methods make it, its controls fitted."""
+    if not names:
+        return Scheme((), case.ready.program)
     unrolled = case.ready.unrolled
     draft = Draft(unrolled.observed)
-    for method in methods:
-        if method.stage is Stage.LEVELS:
-            draft = _changed(method, case, draft)
-    tape = case.ready.expanded(draft.tape) if draft.controls else unrolled.tape
-    draft = replace(draft, tape=tape)
-    for method in sorted(methods, key=lambda method: method.stage):
-        if method.stage is not Stage.LEVELS:
-            draft = _changed(method, case, draft)
+    for stage in (Stage.LEVELS, Stage.NORMALS):
+        for name in names:
+            if BY_NAME[name].stage is stage:
+                draft = _changed(BY_NAME[name], case, draft)
+        if stage is Stage.LEVELS:
+            draft = replace(draft, tape=case.ready.expanded(draft.tape) if draft.controls else unrolled.tape)
     try:
-        return fitted(case, tuple(names), draft)
+        return fitted(case, names, draft)
     except Inapplicable as reason:
         raise Refusal(f"'{case.title}': no '{','.join(names)}', since {reason}") from None
 

@@ -1,7 +1,7 @@
 """`auto`: the methods with the smallest variance times cost in a short pilot.
 
-Costs come from the fixed table of `machine/sizes.py`, never from a clock, so that one seed has one answer. The pilot has
-a stream of its own. Scrambled points are judged by what they do on as few points as the pilot has; on more they do
+Costs come from the fixed table of `machine/sizes.py`, never from a clock, so that one seed has one answer. The pilot
+has a stream of its own. Scrambled points are judged by what they do on as few points as the pilot has; on more they do
 better, so that the choice errs on the side of plain sampling.
 """
 
@@ -46,7 +46,8 @@ class Trial:
 
 def best(case: Case) -> Scheme:
     """The scheme to take, with a note that compares it with plain sampling."""
-    trials = [trial for names in CHOICES if (trial := tried(case, names))]
+    fitted: dict[tuple[str, ...], Scheme] = {}
+    trials = [trial for names in CHOICES if (trial := tried(case, names, fitted))]
     known = [trial for trial in trials if not trial.few]
     plain = trials[0]
     if not known:
@@ -65,10 +66,10 @@ def best(case: Case) -> Scheme:
     return found.scheme.noted(f"auto: {found.scheme.label} by a pilot of {PILOT_PATHS:,} paths; {gain}")
 
 
-def tried(case: Case, names: tuple[str, ...]) -> Trial | None:
+def tried(case: Case, names: tuple[str, ...], fitted: dict[tuple[str, ...], Scheme]) -> Trial | None:
     """What a choice does in the pilot; None where it does not apply."""
     try:
-        scheme = scheme_of(case, names)
+        scheme = scheme_of(case, names, fitted)
     except Refusal:
         return None
     price = cost(replace(scheme.program, outputs=scheme.program.outputs[:1]), scheme.plan) / scheme.each

@@ -58,11 +58,11 @@ class Compared:
 
 def compare(case: Case, seconds: float | None, paths: int | None) -> tuple[list[Compared], list[tuple[str, str]]]:
     """Every choice that applies, plain sampling first, and the names of the others with the reason."""
-    found, refused = [], []
+    found, refused, fitted = [], [], {}
     Sampler(scheme_of(case, ()), case.seed, case.threads, case.notice).sample(FIRST_PILOT)  # compiles, starts threads
     for names in COMPARED:
         try:
-            scheme = scheme_of(case, names)
+            scheme = scheme_of(case, names, fitted)
         except Refusal as reason:
             refused.append((",".join(names), str(reason).partition(", since ")[2]))
             continue

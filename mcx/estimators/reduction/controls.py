@@ -16,7 +16,8 @@ def change(case: Case, draft: Draft) -> Draft:
         raise Inapplicable("no level of a known law is read after today")
     found = {candidate.value: candidate for candidate in (*candidates(market), *watched_candidates(market))}
     outputs = (*draft.tape.outputs, *(Output.of("control", each.value, each.control.name) for each in found.values()))
-    return replace(draft, tape=market.builder.tape(outputs), controls=(*draft.controls, *(each.control for each in found.values())))
+    controls = (*draft.controls, *(each.control for each in found.values()))
+    return replace(draft, tape=market.builder.tape(outputs), controls=controls)
 
 
 CONTROLS = Method("controls", "options with known values beside the contract's own", Stage.LEVELS, change)

@@ -25,6 +25,7 @@ PATHS_EACH = 40  # of the pilot for each candidate
 MOST_NAMED = 6
 MOST_CONTROLS = 48  # chosen; those that must take part come on top
 EXACT = 1e-24  # of the variance: nothing is left but rounding
+PATIENCE = 12  # controls beyond the best number so far
 INDEPENDENT = 1e-9  # of a candidate's variance must be its own
 MULTIPLY_AND_SUBTRACT = 0.34  # ns a path and output: see `machine/sizes.py`
 CONTROLLED = ("price", "leg", "part")
@@ -35,34 +36,32 @@ def fitted(case: Case, names: tuple[str, ...], draft: Draft) -> Scheme:
     pilot say anything about the coefficients."""
     outputs = case.ready.unrolled.tape.outputs
     if not draft.controls:
-        return Scheme(names, case.ready.lowered(draft.tape), draft.plan, draft.each, notes=draft.notes)
+        return Scheme(names, case.ready.lowered(draft.tape), each=draft.each, notes=draft.notes)
     wanted = [number for number, output in enumerate(outputs) if output.kind in CONTROLLED]
-    tape = replace(draft.tape, outputs=tuple(draft.tape.outputs[k] for k in (*wanted, *range(len(outputs), _size(draft)))))
+    piloted = (*wanted, *range(len(outputs), len(draft.tape.outputs)))
+    tape = replace(draft.tape, outputs=tuple(draft.tape.outputs[k] for k in piloted))
     values = _pilot(case, tape, len(draft.controls))
+    paths = values.shape[1] * draft.each
     targets, candidates = values[: len(wanted)].T, values[len(wanted) :].T
-    plain = cost(case.ready.lowered(_without_controls(draft.tape, len(outputs))), draft.plan)
+    plain = cost(case.ready.lowered(_without_controls(draft.tape, len(outputs))))
     costs = Costs(plain, MULTIPLY_AND_SUBTRACT * len({draft.tape.outputs[k].value for k in wanted}),
                   *_own_work(draft.tape, len(outputs)))
     chosen = chosen_controls(targets[:, 0], candidates, draft.controls, costs)
     if not len(chosen) and not any(control.asked for control in draft.controls):  # the methods do without
         whole = _without_controls(draft.tape, len(outputs))
-        return Scheme(names, case.ready.lowered(whole), draft.plan, draft.each, len(values.T) * draft.each, draft.notes)
+        return Scheme(names, case.ready.lowered(whole), each=draft.each, fit_paths=paths, notes=draft.notes)
     if not len(chosen):
         raise Inapplicable("no control lowers variance times cost")
     betas = coefficients(targets, candidates[:, chosen])
     taken = [draft.controls[k] for k in chosen]
     whole = controlled(draft.tape, len(outputs), wanted, chosen, taken, betas)
     notes = (*draft.notes, _listed([control.name for control in taken]))
-    return Scheme(names, case.ready.lowered(whole), draft.plan, draft.each, len(values.T) * draft.each, notes)
+    return Scheme(names, case.ready.lowered(whole), each=draft.each, fit_paths=paths, notes=notes)
 
 
 def _listed(names: list[str]) -> str:
     more = f" and {len(names) - MOST_NAMED} more" if len(names) > MOST_NAMED else ""
     return f"{len(names)} control{'s' * (len(names) > 1)}: {', '.join(names[:MOST_NAMED])}{more}"
-
-
-def _size(draft: Draft) -> int:
-    return len(draft.tape.outputs)
 
 
 def _without_controls(tape: Tape, outputs: int) -> Tape:
@@ -119,9 +118,13 @@ def _needed(tape: Tape, values: list[int]) -> np.ndarray:
     return needed
 
 
-def chosen_controls(target: np.ndarray, candidates: np.ndarray, controls: tuple[Control, ...], costs: Costs) -> np.ndarray:
+def chosen_controls(target: np.ndarray, candidates: np.ndarray, controls: tuple[Control, ...],
+                    costs: Costs) -> np.ndarray:
     """The numbers of the candidates to take: those that must, and of the others the first so many, each the one that
-    then makes variance times cost least, up to where it is least of all. target (paths,), candidates (paths, controls)."""
+    then makes variance times cost least, up to where it is least of all.
+
+    target (paths,), candidates (paths, controls).
+    """
     paths = len(target)
     centred = candidates - candidates.mean(axis=0)
     scale = centred.std(axis=0)
@@ -134,16 +137,16 @@ def chosen_controls(target: np.ndarray, candidates: np.ndarray, controls: tuple[
     must = np.array([control.must for control in controls]) & usable
     most = int(must.sum()) + MOST_CONTROLS
     factor = np.zeros((len(covariance), most))
-    open_work = costs.work.copy()
+    open_work, needs = costs.work.copy(), costs.needs.astype(np.float64)
     spent, taken = costs.plain, []
     best, least = 0, np.inf if must.any() else variance * spent
-    while len(taken) < most and variance > EXACT * whole:
+    while len(taken) < min(most, int(must.sum()) + best + PATIENCE) and variance > EXACT * whole:
         usable[taken] = False
         usable &= left > INDEPENDENT
         if not usable.any():
             break
         gains = np.where(usable, along**2 / np.where(usable, left, 1.0), 0.0)
-        price = spent + costs.each + costs.needs @ open_work
+        price = spent + costs.each + needs @ open_work
         burdens = np.where(usable, np.maximum(variance - gains, 0.0) * price, np.inf)
         pressing = must & usable
         pivot = int(np.argmin(np.where(pressing, burdens, np.inf) if pressing.any() else burdens))

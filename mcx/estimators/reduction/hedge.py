@@ -84,7 +84,8 @@ def _gains(market: Market, asset: int, times: list[float], ended: list[tuple[flo
         before = after
 
 
-def _known(market: Market, asset: int, time: float, log_forward: float, logs: int, count: int) -> Iterator[tuple[str, int]]:
+def _known(market: Market, asset: int, time: float, log_forward: float, logs: int,
+           count: int) -> Iterator[tuple[str, int]]:
     """What is known of an asset on a date, as numbers of about the size of 1."""
     emit, constant = market.builder.emit, market.builder.constant
     deviation = max(market.ready.market.vol_to(market.names[asset], time) * math.sqrt(time), 1e-6)

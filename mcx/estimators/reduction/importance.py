@@ -75,7 +75,7 @@ def shifted(tape: Tape, shift: np.ndarray) -> tuple[Tape, int]:
 
 
 def mode(case: Case) -> np.ndarray:
-    """Where payoff times density is largest, (normals,); zeros where the payoff is the same along every straight path."""
+    """Where payoff times density is largest, (normals,); zeros where every straight path pays the same."""
     unrolled, market = case.ready.unrolled, case.ready.market
     price = drop_dead_code(replace(unrolled.tape, outputs=unrolled.tape.outputs[:1]))
     leaves = market.values(price.leaves)

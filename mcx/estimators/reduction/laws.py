@@ -30,7 +30,7 @@ class Law:
         times = sorted({time for _, time in days})
         assets = sorted({asset for asset, _ in days})
         moving = sorted({*assets, *(rates[asset] for asset in assets if asset in rates)})
-        made_of = np.array([[number in (asset, rates.get(asset)) for number in moving] for asset in assets], dtype=float)
+        made_of = np.array([[float(number in (asset, rates.get(asset))) for number in moving] for asset in assets])
         single = market.step_covariance(moving, np.zeros(len(times)), np.array(times))  # (times, moving, moving)
         to_date = made_of @ single @ made_of.T  # (times, assets, assets)
         index = np.array([[times.index(time), assets.index(asset)] for asset, time in self.days]).reshape(-1, 2)
@@ -57,7 +57,7 @@ class Law:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Lognormal:
-    """exp(shift + sum of power * log level), whose log has mean `mu`; `along`: covariances of its log with each day's."""
+    """exp(shift + sum of power * log level), its log of mean `mu`; `along`: the covariance of its log with each day's."""
 
     powers: Product
     shift: float
@@ -74,7 +74,7 @@ class Lognormal:
 
 
 def exchange_mean(receive: Lognormal, give: Lognormal) -> float:
-    """E max(A - B, 0). W. Margrabe, "The value of an option to exchange one asset for another", J. Finance 33 (1978)."""
+    """E max(A - B, 0). W. Margrabe, "The value of an option to exchange one asset for another" (1978)."""
     variance = max(receive.covariance(receive) - 2.0 * receive.covariance(give) + give.covariance(give), 0.0)
     deviation = math.sqrt(variance)
     a, b = receive.mean, give.mean

@@ -19,7 +19,8 @@ def wished(reduction: str | Sequence[str]) -> tuple[str, ...]:
     names = [name.strip() for name in given]
     for name in names:
         if name not in (NONE, AUTO, *NAMES):
-            raise RequestError(f"the variance reduction '{name}' is not known{did_you_mean(name, (NONE, AUTO, *NAMES))}; "
+            near = did_you_mean(name, (NONE, AUTO, *NAMES))
+            raise RequestError(f"the variance reduction '{name}' is not known{near}; "
                                f"there are {NONE}, {AUTO}, {', '.join(NAMES)}")
     if len(set(names)) < len(names):
         raise RequestError("a variance reduction is named twice")

@@ -85,7 +85,8 @@ class Sampler:
             raise KeyboardInterrupt
         reached = {part.paths: part for part in (*sums.snapshots, sums)
                    if FEWEST_PATHS * batch <= part.paths <= sums.paths}
-        stages = tuple(estimates(paths, part.mean[:1], part.m2[:1], batch)[0] for paths, part in sorted(reached.items()))
+        stages = tuple(estimates(paths, part.mean[:1], part.m2[:1], batch)[0]
+                       for paths, part in sorted(reached.items()))
         return Sampled(estimates(sums.paths, sums.mean, sums.m2, batch), stages, sums.interrupted)
 
     def independent(self, wanted: int, stream: int = Stream.PILOT) -> Independent:

@@ -1,7 +1,7 @@
 """Stratified terminal value: the end of the first asset's path in 64 parts of equal probability, one path in each.
 
-Paths are made in the order of a Brownian bridge, so that the first coordinate is the path's end. The 64 paths of a group
-share out its range; groups are independent of one another, and the error is that of their means.
+Paths are made in the order of a Brownian bridge, so that the first coordinate is the path's end. The 64 paths of a
+group share out its range; groups are independent of one another, and the error is that of their means.
 """
 
 from __future__ import annotations
