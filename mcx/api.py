@@ -26,7 +26,7 @@ if TYPE_CHECKING:
     from mcx.estimators.ready import Ready
     from mcx.report.greek_results import GreeksResult, GreeksTable
     from mcx.report.method_results import MethodsResult, MethodsTable
-    from mcx.report.results import Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay
+    from mcx.report.results import Definition, Library, PriceResult, PriceTable, Readback, ReadbackTable, Replay, Result
     from mcx.report.state_results import CalendarView
     from mcx.report.verify_results import VerifyResult, VerifyTable
 
@@ -48,6 +48,7 @@ def price(
     threads: int | None = None,
     reduction: str = "none",
     record: File | None = None,
+    report: File | None = None,
     progress: Progress | None = None,
     notice: Callable[[str], None] | None = None,
 ) -> PriceResult | PriceTable:
@@ -56,9 +57,9 @@ def price(
     At most one of `paths`, `within` (a 95 % half-width: '2bp' or '0.02%' of the notional, '0.01' money per unit) and
     `seconds` decides the number of paths; without any it is 2^20. `seed` None is 1. `threads` None takes all; it
     changes no digit. `reduction` lists methods of variance reduction, parted by commas ('antithetic,controls'), or is
-    'none', or 'auto' for the choice of a short pilot. `record` names a file to write a valuation record to. `notice` is
-    called with a sentence when kernels must be compiled, or a run will take long. Raises InputError, RequestError,
-    Refusal.
+    'none', or 'auto' for the choice of a short pilot. `record` names a file to write a valuation record to, `report`
+    one for a page of HTML. `notice` is called with a sentence when kernels must be compiled, or a run will take long.
+    Raises InputError, RequestError, Refusal.
     """
     from mcx.estimators.plan import DEFAULT_SEED, check_fits, precision
     from mcx.estimators.reduction.names import wished
@@ -71,6 +72,10 @@ def price(
         from mcx.report.record import check_free
 
         check_free(record)
+    if report is not None:
+        from mcx.report.page.render import check_writable
+
+        check_writable(report)
     made, dated = _dated(files, with_market=True)
     for each in made.contracts:
         check_fits(asked, notional=each.notional is not None, title=each.title)
@@ -80,6 +85,8 @@ def price(
         from mcx.report.record import make_record, write_record
 
         write_record(record, make_record(_sources(made), [each.to_dict() for each in table.prices]))
+    if report is not None:
+        _write_report(report, "price", files, made, dated, table.prices)
     return table.prices[0] if len(made.contracts) == 1 else table
 
 
@@ -97,6 +104,7 @@ def greeks(
     threads: int | None = None,
     reduction: str = "none",
     record: File | None = None,
+    report: File | None = None,
     progress: Progress | None = None,
     notice: Callable[[str], None] | None = None,
 ) -> GreeksResult | GreeksTable:
@@ -122,6 +130,10 @@ def greeks(
         from mcx.report.record import check_free
 
         check_free(record)
+    if report is not None:
+        from mcx.report.page.render import check_writable
+
+        check_writable(report)
     made, dated = _dated(files, with_market=True)
     for each in made.contracts:
         check_fits(asked, notional=each.notional is not None, title=each.title)
@@ -134,6 +146,8 @@ def greeks(
         from mcx.report.record import make_record, write_record
 
         write_record(record, make_record(_sources(made), [each.to_dict() for each in table.contracts], "greeks"))
+    if report is not None:
+        _write_report(report, "greeks", files, made, dated, table.contracts)
     return table.contracts[0] if len(made.contracts) == 1 else table
 
 
@@ -148,6 +162,7 @@ def verify(
     threads: int | None = None,
     reduction: str = "none",
     record: File | None = None,
+    report: File | None = None,
     progress: Progress | None = None,
     notice: Callable[[str], None] | None = None,
 ) -> VerifyResult | VerifyTable:
@@ -173,6 +188,10 @@ def verify(
         from mcx.report.record import check_free
 
         check_free(record)
+    if report is not None:
+        from mcx.report.page.render import check_writable
+
+        check_writable(report)
     made, dated = _dated(files, with_market=True, with_quote=True)
     for each in made.contracts:
         check_fits(asked, notional=each.notional is not None, title=each.title)
@@ -182,6 +201,8 @@ def verify(
         from mcx.report.record import make_record, write_record
 
         write_record(record, make_record(_sources(made), [each.to_dict() for each in results], "verify"))
+    if report is not None:
+        _write_report(report, "verify", files, made, dated, results)
     if count == 1:
         return results[0]
     from mcx.report.verify_summary import verify_table
@@ -296,6 +317,19 @@ def blank(name: str, assets: Sequence[str]) -> str:
         wanted = f"{fewest}" if most == fewest else f"{fewest} or more"
         raise RequestError(f"'{name}' takes {wanted} asset{'' if wanted == '1' else 's'}, not {len(assets)}")
     return fill_in(payoff, assets)
+
+
+def schema(name: str | None = None) -> dict:
+    """The JSON schema of documents, for editors: with contracts on one definition of the library, or on any.
+
+    Raises RequestError for an unknown name.
+    """
+    from mcx.checked.library import shipped_names
+    from mcx.report.schemas.documents import schema as schema_of
+
+    names = shipped_names() if name is None else (name,)
+    title = "contracts, markets and payoff definitions" if name is None else f"a contract on '{name}', and its market"
+    return schema_of([_shipped(each) for each in names], title, only=name is not None)
 
 
 def replay(
@@ -481,6 +515,27 @@ def _greeks(
         if found.interrupted:
             break
     return GreeksTable(tuple(results), tuple(each.contract.title for each in dated[len(results):]))
+
+
+def _write_report(
+    file: File,
+    verb: str,
+    files: Sequence[File],
+    made: Request,
+    dated: Sequence[DatedContract],
+    results: Sequence[Result],
+) -> None:
+    """A page about what was found, as far as it was, with the command that finds it again."""
+    from mcx.report.page.render import page, write_page
+    from mcx.report.repeat import command
+    from mcx.report.scene import scene
+
+    wanted = {result.contract for result in results}
+    ready = {each.dated.contract.title: each
+             for each in _ready(made, [each for each in dated if each.contract.title in wanted])}
+    sources = _sources(made)
+    scenes = [scene(ready[result.contract], sources, command(verb, files, result)) for result in results]
+    write_page(file, page(f"mcx {verb}", results, scenes))
 
 
 def _verify(
