@@ -48,6 +48,7 @@ def definitions() -> dict[str, Schema]:
         "formula": line(),
         "term": _term(),
         "at": text(rf"^\w+(\.({'|'.join(PARTS)}))?$"),
+        "hit": mapping({"once": text(NAME, "a running flag")}, ("once",)),
         "running": _running(),
         "event": _event(),
         "action": _action(),
@@ -106,7 +107,7 @@ def _event() -> Schema:
     """One action, or a condition with what happens where it holds and where it does not."""
     actions = listed(refer("action"))
     keys = mapping({
-        "at": refer("at"), "from": line(), "until": line(), "name": line("of the condition, in every report"),
+        "at": either(refer("at"), refer("hit")), "from": line(), "until": line(), "name": line("of the condition, in every report"),
         "if": refer("formula"), "then": actions, "else": actions, **_of_an_action(),
     }, ("at",))
     return keys | {"if": {"required": ["if"]}, "then": {"required": ["then"]} | absent(*ACTIONS, *OF_DELIVER),
