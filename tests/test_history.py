@@ -159,8 +159,8 @@ def test_a_composite_level_needs_the_rate_of_its_day(tmp_path: Path):
     ("2027-09-01", ("lantern",), "that day's fixing of lantern is left out, for that of USD per EUR is not in"),
     ("2027-09-01", ("USD per EUR",), "that day's fixing of USD per EUR is left out, for that of lantern is not in"),
     ("2027-09-01", (), ""),
-    ("2027-07-01", ("lantern",), "fixings of lantern on days without one of USD per EUR are left out, the first of them "
-                                 "of 2027-07-01")])
+    ("2027-07-01", ("lantern",),
+     "fixings of lantern on days without one of USD per EUR are left out, the first of them of 2027-07-01")])
 def test_one_fixing_alone_of_a_composite_level_is_said_to_be_left_out(day: str, inside: tuple[str, ...], said: str):
     """It is half of a level: on the valuation date the market's spots count, earlier nothing reads it."""
     levels = {key: level for key, level in LEVELS.items() if key[1] < "2027-09"}

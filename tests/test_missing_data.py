@@ -130,7 +130,7 @@ def test_a_watch_that_lacks_numbers_hides_no_other_fixing():
             "running:\n  hit: {ever: worst(spot / initial) < 60%, at: watched}\nevents:\n"
             "  - {at: seen, if: hit, then: [pay: worst(spot)]}\n---\ncontract: note"))
     start, end = text.index("  observations:"), text.index("  watched: {cont")
-    text = text[:start] + "  seen: [2027-03-01, 2027-09-01]\n" + text[end:].replace("  strike: 100%\n", "").replace(
-        "settlement: 2", "settlement: 60")
+    text = text[:start] + "  seen: [2027-03-01, 2027-09-01]\n" + text[end:]
+    text = text.replace("  strike: 100%\n", "").replace("settlement: 2", "settlement: 60")
     assert sorted(told(text))[1:] == [f"'note' needs a fixing of '{name}' on 2026-12-01, 2026-12-08 and 2027-03-01"
                                       for name in ASSETS]
