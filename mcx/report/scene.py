@@ -36,9 +36,10 @@ MOST_FANS = 3
 class Scene:
     """The surroundings of one contract's number.
 
-    `base` names the term that levels are measured by ('' where they are not); then fans are in percent of it. `profile`
-    holds (final performance, undiscounted payments), both in percent where there is a base and a notional. `sources`
-    are files with their SHA-256.
+    `base` names the term that levels are measured by ('' where they are not); then fans are in percent of it. `left_out`
+    are assets for whose fans there is no room. `profile` holds (final performance, undiscounted payments), both in
+    percent where there is a base and a notional, `marked` the levels on its scale that the contract looks at last.
+    `sources` are files with their SHA-256.
     """
 
     terms: tuple[tuple[str, str], ...]
@@ -47,7 +48,9 @@ class Scene:
     ticks: tuple[tuple[float, str], ...]
     base: str
     fans: tuple[Fan, ...]
+    left_out: tuple[str, ...]
     profile: tuple[tuple[float, float], ...]
+    marked: tuple[tuple[str, float], ...]
     command: str
 
 
@@ -57,6 +60,7 @@ def scene(ready: Ready, documents: Sequence[Document], command: str) -> Scene:
     settled, words = Settled(dated.contract), Words(dated)
     base = _base(settled)
     texts = {document.file: document.text for document in documents}
+    fans = tuple(_fans(ready, settled, base))
     days = {moment.day.time: str(moment.day) for moment in dated.moments if moment.day.time >= 0.0}
     return Scene(
         terms=tuple((term.name, words.term(term)) for term in dated.contract.payoff.terms),
@@ -64,8 +68,10 @@ def scene(ready: Ready, documents: Sequence[Document], command: str) -> Scene:
         sources=tuple((file, hashlib.sha256(text.encode()).hexdigest()) for file, text in texts.items()),
         ticks=((0.0, "today"), *sorted(days.items())),
         base=base,
-        fans=tuple(_fans(ready, settled, base)),
+        fans=fans,
+        left_out=tuple(dated.contract.assets[MOST_FANS:]),
         profile=tuple(_profile(ready, base)),
+        marked=_marked(fans) if base else (),
         command=command,
     )
 
@@ -146,6 +152,12 @@ def _barriers(dated: DatedContract, settled: Settled, base: str, number: int, ti
                   for when in (max(first, 0.0), last)]
         if points and shown[0] > 0.0:
             yield Series(name.replace("_", " "), tuple(points))
+
+
+def _marked(fans: Sequence[Fan]) -> tuple[tuple[str, float], ...]:
+    """Levels in percent of the base that are the same for all assets."""
+    found = [{(f"{each.name} {each.points[-1][1]:.4g}", each.points[-1][1]) for each in fan.barriers} for fan in fans]
+    return tuple(sorted(set.intersection(*found), key=lambda named: named[1])) if found else ()
 
 
 def _profile(ready: Ready, base: str) -> Iterator[tuple[float, float]]:

@@ -17,7 +17,8 @@ class Facts:
 
 @dataclass(frozen=True, slots=True)
 class Table:
-    """Rows below heads; the first `words` columns hold words, and those from `tail` on."""
+    """Rows below heads; the first `words` columns hold words, and those from `tail` on. `wide` ones take the whole
+    width of a page."""
 
     title: str
     heads: tuple[str, ...]
@@ -25,6 +26,7 @@ class Table:
     words: int = 1
     tail: int = 99
     note: str = ""
+    wide: bool = False
     kind: str = "table"
 
 
@@ -35,6 +37,7 @@ class Picture:
     title: str
     svg: str
     note: str = ""
+    wide: bool = False
     kind: str = "picture"
 
 
@@ -49,12 +52,17 @@ class Notes:
 
 @dataclass(frozen=True, slots=True)
 class Sheet:
-    """One contract's part of a page: the answer in large letters, then blocks; wide ones take the whole width."""
+    """One contract's part of a page: the answer in large letters, then blocks."""
 
     title: str
     answer: str
     below: str
     blocks: tuple[Facts | Table | Picture | Notes, ...]
+
+    @property
+    def pictures(self) -> list[tuple[str, str]]:
+        """Titles and SVGs."""
+        return [(block.title, block.svg) for block in self.blocks if isinstance(block, Picture)]
 
 
 def cut(rows: Sequence[tuple[str, ...]], most: int) -> tuple[tuple[tuple[str, ...], ...], str]:
