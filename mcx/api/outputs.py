@@ -73,7 +73,7 @@ def write_outputs(
         from mcx.report.pictures.file import write_pictures
 
         sheet, = found
-        write_pictures(wanted.picture, f"{sheet.title}: {sheet.answer}", sheet.pictures)
+        write_pictures(wanted.picture, sheet.title, sheet.answer, sheet.pictures)
 
 
 def _sheets(

@@ -67,7 +67,7 @@ def refused(result: GreeksResult) -> Iterator[str]:
 def greek_row(greek: Greek, words: str) -> tuple[str, ...]:
     """A sensitivity with its error, and what is said of it."""
     places = decimals(greek.standard_error, 2, 2)
-    said = words if greek.resolved else f"{words}; not resolved"
+    said = "; ".join(filter(None, (words, "" if greek.resolved else "not resolved")))
     name = " ".join(filter(None, (greek.name, greek.asset, greek.tenor)))
     return name, fixed(greek.value, places), fixed(greek.standard_error, places), greek.unit, said
 

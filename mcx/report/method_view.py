@@ -42,13 +42,17 @@ def against_closed_form(result: MethodsResult, factor: float, unit: str) -> str:
 
 
 def found(result: MethodsResult) -> list[str]:
-    """What the choices found on their pilots."""
-    return [f"{line.method}: {note}" for line in result.methods for note in line.notes]
+    """What the choices found on their pilots, those that found the same together."""
+    said: dict[str, list[str]] = {}
+    for line in result.methods:
+        for note in line.notes:
+            said.setdefault(note, []).append(line.method.replace(",", " + "))
+    return [f"{', '.join(methods)}: {note}" for note, methods in said.items()]
 
 
 def refused(result: MethodsResult) -> list[str]:
     """Choices that have nothing to offer, and why."""
-    return [f"{one.method}: {one.reason}" for one in result.not_applied]
+    return [f"{one.method.replace(',', ' + ')}: {one.reason}" for one in result.not_applied]
 
 
 def method_row(line: MethodLine, factor: float, percent: bool) -> Iterator[str]:

@@ -187,10 +187,13 @@ def _profile(ready: Ready, base: str) -> Iterator[tuple[float, float]]:
 
 
 def _lines(node: Mapping, path: str = "") -> Iterator[tuple[str, str]]:
-    """The numbers of a market as they were written, a curve on one line."""
+    """The numbers of a market as they were written: a curve on one line, and all that is said of an asset."""
     for key, value in node.entries:
         name = f"{path} {key}".strip()
-        if isinstance(value, Mapping) and not all(_is_one(inner) for _, inner in value.entries):
+        if name == "assets" and isinstance(value, Mapping):
+            yield from ((str(asset), "; ".join(f"{what} {_said(one)}".replace("_", " ") for what, one in said.entries))
+                        for asset, said in value.entries if isinstance(said, Mapping))
+        elif isinstance(value, Mapping) and not all(_is_one(inner) for _, inner in value.entries):
             yield from _lines(value, name)
         elif isinstance(value, Mapping) and "value" not in value:
             yield name, "; ".join(f"{inner} {_said(one)}" for inner, one in value.entries)

@@ -43,7 +43,7 @@ class Picture:
 
 @dataclass(frozen=True, slots=True)
 class Notes:
-    """Sentences."""
+    """Sentences, or (by its kind 'command') words for a prompt, which are never broken at a hyphen."""
 
     title: str
     items: tuple[str, ...]

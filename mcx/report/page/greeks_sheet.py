@@ -29,9 +29,9 @@ def greeks_sheet(result: GreeksResult, scene: Scene | None) -> Sheet:
               if result.bracket else []),
             ("paths", f"{result.paths:,} in {result.seconds:.2f} s; asked for: {result.planned.asked}"),
             ("seed", f"{result.seed}; variance reduction: {result.reduction}; estimator: {result.estimator}"))
-    blocks = [Facts("valuation", head), *_pictures(result), *_numbers(result), *_ladder(result, factor, unit, places),
-              *_grid(result, factor, unit, places)]
+    blocks = [Facts("valuation", head), *_pictures(result), *_numbers(result), *_curve(result, factor, unit, places)]
     blocks += surroundings(scene, unit) if scene else ()
+    blocks += [*_ladder(result, factor, places, unit), *_grid(result, factor, unit, places)]
     jumps = [f"{jump.kind} at {jump.place or 'an unnamed place'}" for jump in result.jumps]
     blocks += notes(("not given", list(refused(result))), (JUMPS, jumps), ("choice of estimators", result.choices), ("warnings", result.warnings),
                     ("assumptions", result.assumptions or ("none",)))
@@ -68,27 +68,35 @@ def _numbers(result: GreeksResult) -> Iterator[Table]:
     rows, left = cut([greek_row(each, "" if each.estimator == usual else each.estimator) for each in result.greeks],
                      MOST_ROWS)
     yield Table("sensitivities (sampling error only)", ("", "value", "error", "unit", "by"), rows, tail=3,
-                note="; ".join(filter(None, (usual and f"by {usual} where nothing else is said", left))))
+                note="; ".join(filter(None, (usual and f"by {usual} where nothing else is said", left))), wide=True)
     if result.comparison:
         rows, left = cut([greek_row(each, "") for each in result.comparison], MOST_ROWS)
         yield Table("for comparison: revaluation on the same random numbers", ("", "value", "error", "unit", ""), rows,
-                    tail=3, note="; ".join(filter(None, ("biased by the size of the move", left))))
+                    tail=3, note="; ".join(filter(None, ("biased by the size of the move", left))), wide=True)
 
 
-def _ladder(result: GreeksResult, factor: float, unit: str, places: int) -> Iterator[Picture | Table]:
-    if len(result.ladder) < 2:
-        return
-    title = "spots moved together" if not result.assets else f"only {', '.join(result.assets)} moved"
-    points = tuple((100.0 * rung.spot_move, factor * rung.price) for rung in result.ladder)
-    said = f"Price in {unit} as spots move: " + ", ".join(
-        f"{move(rung.spot_move)} {fixed(factor * rung.price, places)}" for rung in result.ladder) + "."
-    yield Picture(f"price, {title}", curve(f"price, {title}", said, points, "move of spots, %", f"price, {unit}"))
-    few = result.ladder[0].deltas[:MOST_DELTAS]
-    heads = ("spot", unit, f"change, {result.currency}", "error", *(f"delta {each.asset}" for each in few), "")
-    yield Table(f"{title}, in numbers", heads, tuple(
-        (*rung_row(rung, factor, places)[:4 + len(few)], rung_row(rung, factor, places)[-1])
-        for rung in result.ladder), words=0, tail=len(heads) - 1, note="The same random numbers on every rung.",
-        wide=True)
+def _curve(result: GreeksResult, factor: float, unit: str, places: int) -> Iterator[Picture]:
+    """The price along a ladder."""
+    if len(result.ladder) > 1:
+        points = tuple((100.0 * rung.spot_move, factor * rung.price) for rung in result.ladder)
+        said = f"Price in {unit} as spots move: " + ", ".join(
+            f"{move(rung.spot_move)} {fixed(factor * rung.price, places)}" for rung in result.ladder) + "."
+        title = f"price, {_moved(result)}"
+        yield Picture(title, curve(title, said, points, "move of spots, %", f"price, {unit}"))
+
+
+def _moved(result: GreeksResult) -> str:
+    return "spots moved together" if not result.assets else f"only {', '.join(result.assets)} moved"
+
+
+def _ladder(result: GreeksResult, factor: float, places: int, unit: str) -> Iterator[Table]:
+    """The rungs in numbers, with the deltas of as many assets as there is room for."""
+    if result.ladder:
+        few = result.ladder[0].deltas[:MOST_DELTAS]
+        rows = [rung_row(rung, factor, places) for rung in result.ladder]
+        heads = ("spot", unit, f"change, {result.currency}", "error", *(f"delta {each.asset}" for each in few), "")
+        yield Table(f"{_moved(result)}, in numbers", heads, tuple((*row[:4 + len(few)], row[-1]) for row in rows),
+                    tail=len(heads) - 1, note="The same random numbers on every rung.", wide=True)
 
 
 def _grid(result: GreeksResult, factor: float, unit: str, places: int) -> Iterator[Table]:
@@ -103,5 +111,5 @@ def _grid(result: GreeksResult, factor: float, unit: str, places: int) -> Iterat
     refused_ = dict.fromkeys(f"vol {points(point.vol_move)}, spot {move(point.spot_move)}: {point.refused}"
                              for point in result.grid if point.refused)
     yield Table(f"price in {unit} by moves of spots (down) and vols (across)",
-                ("spot", *(f"vol {points(vol)}" for vol in vols[:MOST_VOLS])), rows, words=0,
+                ("spot", *(f"vol {points(vol)}" for vol in vols[:MOST_VOLS])), rows,
                 note="; ".join(("the same random numbers everywhere", *left, *refused_)), wide=True)

@@ -27,7 +27,7 @@ def methods_sheet(result: MethodsResult, scene: Scene | None) -> Sheet:
     blocks = [Table("variance reduction, the most efficient first", (HEADS[0], unit, *HEADS[1:-1], f"{HEADS[-1]}, s"),
                     rows, note=explained(percent), wide=True), *_lines(result, factor, unit)]
     head = [("contract", f"{result.contract} ({result.payoff})"), ("seed", str(result.seed)),
-            ("each choice for", result.each), ("processor", "seconds are of one machine as busy as it was")]
+            ("each choice for", result.each), ("seconds", "those of one machine, as busy as it was")]
     if result.closed_form is not None:
         head.append(("closed form", against_closed_form(result, factor, unit)))
     blocks.append(Facts("comparison", tuple(head)))
@@ -48,7 +48,7 @@ def _lines(result: MethodsResult, factor: float, unit: str) -> Iterator[Picture]
         said = f"Standard error in {unit} after so many seconds: " + "; ".join(
             f"{each.name} {each.points[-1][1]:.2g} after {each.points[-1][0]:.2g} s" for each in series) + "."
         yield Picture(TITLE, errors(TITLE, said, series, "seconds", f"standard error, {unit}"),
-                      "Lower is better; a line that falls twice as fast beats the root of the paths.", wide=True)
+                      "Lower and further to the left is better; the errors of short runs are rough themselves.", wide=True)
 
 
 def _plus(method: str) -> str:

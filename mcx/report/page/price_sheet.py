@@ -76,8 +76,8 @@ def evidence(scene: Scene) -> Iterator[Facts | Notes]:
     """The contract's terms, the inputs, where both were read, and how to find the number again."""
     yield Facts("terms of the contract", scene.terms)
     yield Facts("market, as stated", scene.inputs)
-    yield Facts("files and their SHA-256", scene.sources)
-    yield Notes("to repeat it", (scene.command,))
+    yield Notes("files and their SHA-256", tuple(f"{file}: {digest}" for file, digest in scene.sources))
+    yield Notes("to repeat it", (scene.command,), kind="command")
 
 
 def _legs(result: PriceResult, scale: Scale) -> Iterator[Picture | Table]:

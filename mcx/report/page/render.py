@@ -67,9 +67,15 @@ def _render(title: str, sheets: Sequence[Sheet], whole: bool) -> str:
     from jinja2 import Environment, FunctionLoader, StrictUndefined
 
     environment = Environment(loader=FunctionLoader(_read), autoescape=True, undefined=StrictUndefined)
+    environment.filters["joined"] = _joined
     template = environment.get_template("page.html")
     style = variables() + _read("page.css")
     return template.render(title=title, sheets=sheets, whole=whole, style=style, footer=FOOTER)
+
+
+def _joined(text: str) -> str:
+    """A number and its percent sign, and the sides of a '±', stay on one line."""
+    return text.replace(" %", "\N{NO-BREAK SPACE}%").replace(" ± ", "\N{NO-BREAK SPACE}±\N{NO-BREAK SPACE}")
 
 
 def _read(name: str) -> str:

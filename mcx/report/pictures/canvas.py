@@ -101,6 +101,13 @@ class Canvas:
         node.set("text-anchor", anchor)
         node.text = _clean(words)
 
+    def plate(self, x: float, y: float, words: str) -> None:
+        """Words behind x, or before it where the picture ends, on paper that hides what would run through them."""
+        wide = width(words)
+        left = x + 3 if x + 3 + wide <= self.width else x - 3 - wide
+        self._add("rect", "paper", x=left - 1, y=y - 10, width=wide + 2, height=12)
+        self.text(left, y, words)
+
     def segment(self, x1: float, y1: float, x2: float, y2: float, kind: str) -> None:
         self._add("line", kind, x1=x1, y1=y1, x2=x2, y2=y2)
 

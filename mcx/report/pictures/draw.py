@@ -112,18 +112,17 @@ def curve(title: str, said: str, points: Sequence[tuple[float, float]], across: 
     """One line over a scale of numbers, both axes named; places that matter are marked with their names."""
     x = Scale(min(place for place, _ in points), max(place for place, _ in points), LEFT, WIDTH - RIGHT)
     shown = sorted((x(place), fit(name, NAME)) for name, place in marked if x.low <= place <= x.high)
-    rows = _rows([(place, width(name)) for place, name in shown])
+    rows = _rows([(place, place + 6 + width(name)) for place, name in shown])
     top = TOP + ROW * (1 + max(rows, default=-1)) + 4
     foot = top + HEIGHT - TOP - BOTTOM
     canvas = Canvas(WIDTH, foot + BOTTOM + 14, title, said)
     y = scale([number for _, number in points], foot, top)
     canvas.across([(y(tick), written(tick)) for tick in y.ticks()], LEFT, WIDTH - RIGHT)
     canvas.along([(x(tick), written(tick)) for tick in x.ticks(8)], foot, LEFT, WIDTH - RIGHT)
+    for (place, _), row in zip(shown, rows, strict=True):
+        canvas.segment(place, TOP - 6 + ROW * row, place, foot, "thread")
     for (place, name), row in zip(shown, rows, strict=True):
-        height = TOP + 4 + ROW * row
-        canvas.segment(place, height + 4, place, foot, "thread")
-        half = width(name) / 2
-        canvas.text(min(max(place, half), WIDTH - half), height, name, "middle")
+        canvas.plate(place, TOP + 4 + ROW * row, name)
     canvas.line([(x(place), y(number)) for place, number in points])
     canvas.text(0, 10, up, kind="soft")
     canvas.text(WIDTH - RIGHT, canvas.height - 4, across, "end", "soft")
@@ -209,7 +208,7 @@ def errors(title: str, said: str, series: Sequence[Series], across: str, up: str
     _drawn(canvas, x, y, logs)
     for each in logs:  # to the edge, where the names are
         last = each.points[-1]
-        canvas.segment(x(last[0]), y(last[1]), WIDE - right, y(last[1]), "thread")
+        canvas.segment(x(last[0]), y(last[1]), WIDE - right, y(last[1]), "grid")
     canvas.labels(WIDE - right, [(y(each.points[-1][1]), each.name, "words") for each in logs], TOP, foot)
     canvas.text(0, 10, up, kind="soft")
     canvas.text(WIDE - right, height - 4, across, "end", "soft")
@@ -246,11 +245,10 @@ def _sides(names: Sequence[str], shown: Sequence[str]) -> tuple[float, float]:
 
 
 def _rows(labels: Sequence[tuple[float, float]]) -> list[int]:
-    """For labels (middle, width) from left to right, the first row on which each meets none before it."""
-    reached: list[float] = []
-    rows = []
-    for middle, wide in labels:
-        row = next((row for row, end in enumerate(reached) if middle - wide / 2 > end), len(reached))
-        reached[row:row + 1] = [middle + wide / 2 + 6]
-        rows.append(row)
+    """For labels (start, end) from left to right, each behind a line down from its start: the first row below those that
+    its line would cross."""
+    rows: list[int] = []
+    for start, _ in labels:
+        crossed = [row for row, (_, end) in zip(rows, labels, strict=False) if end > start]
+        rows.append(1 + max(crossed, default=-1))
     return rows

@@ -13,14 +13,14 @@ from typing import TYPE_CHECKING
 from xml.etree import ElementTree
 
 from mcx.faults import RequestError
-from mcx.report.pictures.canvas import SIZE, Canvas, fit
+from mcx.report.pictures.canvas import ROW, SIZE, Canvas, fit
 from mcx.report.pictures.palette import INKS, LIGHT
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
 
 SUFFIXES = (".png", ".svg")
-MARGIN, HEAD = 12.0, 26.0
+MARGIN, HEAD, LEAST = 12.0, 26.0, 400.0
 DOTS = 200  # for 100 units of a picture
 POINTS = 0.72  # of type for one unit
 SVG = "{http://www.w3.org/2000/svg}"  # before the names of what was read
@@ -43,9 +43,9 @@ def check_picture(file: str | Path) -> None:
                                "nothing else") from None
 
 
-def write_pictures(file: str | Path, title: str, pictures: Sequence[tuple[str, str]]) -> None:
+def write_pictures(file: str | Path, title: str, answer: str, pictures: Sequence[tuple[str, str]]) -> None:
     """Writes pictures (title, SVG) as one file, whole or not at all; raises RequestError where it cannot be written."""
-    root = stacked(title, pictures)
+    root = stacked(title, answer, pictures)
     text = ElementTree.tostring(root, encoding="unicode")
     data = _painted(root) if Path(file).suffix.lower() == ".png" else text.encode()
     try:
@@ -55,15 +55,17 @@ def write_pictures(file: str | Path, title: str, pictures: Sequence[tuple[str, s
         raise RequestError(f"{file}: the picture cannot be written: {reason}") from None
 
 
-def stacked(title: str, pictures: Sequence[tuple[str, str]]) -> ElementTree.Element:
+def stacked(title: str, answer: str, pictures: Sequence[tuple[str, str]]) -> ElementTree.Element:
     """One SVG on white paper with all the pictures, each a part of its own with its words."""
     parts = [(name, _read(svg)) for name, svg in pictures]
-    wide = 2 * MARGIN + max(float(part.get("width")) for _, part in parts)
-    high = 2 * MARGIN + HEAD + sum(HEAD + MARGIN + float(part.get("height")) for _, part in parts)
-    canvas = Canvas(wide, high, title, f"{len(parts)} pictures: " + "; ".join(name for name, _ in parts) + ".")
+    wide = 2 * MARGIN + max((float(part.get("width")) for _, part in parts), default=LEAST)
+    high = 2 * MARGIN + 2 * HEAD + sum(HEAD + MARGIN + float(part.get("height")) for _, part in parts)
+    said = f"{answer}. {len(parts)} pictures: {'; '.join(name for name, _ in parts)}."
+    canvas = Canvas(wide, high, title, said)
     ElementTree.SubElement(canvas.root, "rect", {"width": "100%", "height": "100%", "fill": INKS["paper"][LIGHT]})
     canvas.text(MARGIN, MARGIN + SIZE, fit(title, wide - 2 * MARGIN))
-    top = MARGIN + HEAD
+    canvas.text(MARGIN, MARGIN + SIZE + ROW, fit(answer, wide - 2 * MARGIN))
+    top = MARGIN + 2 * HEAD
     for name, part in parts:
         canvas.text(MARGIN, top + SIZE, fit(name, wide - 2 * MARGIN), kind="soft")
         part.set("x", f"{MARGIN:g}")

@@ -22,7 +22,7 @@ INKS = {  # on light paper, on dark paper
 }
 LINES = ("a", "b", "c", "d")
 KINDS = {  # what is drawn: the property that has the ink, and the ink
-    "words": ("fill", "ink"), "soft": ("fill", "soft"), "dot": ("fill", "ink"), "bar": ("fill", "fill"),
+    "paper": ("fill", "paper"), "words": ("fill", "ink"), "soft": ("fill", "soft"), "dot": ("fill", "ink"), "bar": ("fill", "fill"),
     "band": ("fill", "fill"), "grid": ("stroke", "grid"), "axis": ("stroke", "ink"), "error": ("stroke", "ink"),
     "thread": ("stroke", "soft"), **{f"line-{ink}": ("stroke", ink) for ink in LINES},
     **{f"mark-{ink}": ("fill", ink) for ink in LINES},
@@ -39,4 +39,5 @@ def variables() -> str:
     """The inks for a page's style: custom properties, and the dark ones in place of the light where that is wanted."""
     light, dark = ("".join(f"--{name}:{both[side]};" for name, both in INKS.items()) for side in (LIGHT, DARK))
     laid = "".join(f".mcx-picture .{kind}{{{what}:{INKS[ink][DARK]}}}" for kind, (what, ink) in KINDS.items())
-    return f".mcx-page{{{light}}}\n@media screen and (prefers-color-scheme:dark){{.mcx-page{{{dark}}}\n{laid}}}\n"
+    where = ":root:has(>.mcx-page),.mcx-page"
+    return f"{where}{{{light}}}\n@media screen and (prefers-color-scheme:dark){{{where}{{{dark}}}\n{laid}}}\n"
