@@ -19,7 +19,7 @@ from mcx.estimators.ready import Ready
 from mcx.report.pictures.draw import Fan, Series
 from mcx.report.settled import Settled
 from mcx.report.wording import COMPARED, Words
-from mcx.tape.formulas import figure
+from mcx.tape.formulas import figure, fixed_values
 from mcx.tape.interpret import interpret, outputs
 from mcx.tape.ops import Op
 from mcx.tape.program import LeafKind, LevelKey
@@ -177,9 +177,16 @@ def _profile(ready: Ready, base: str) -> Iterator[tuple[float, float]]:
         ends = level(key.asset, key.start), level(key.asset, key.time)
         return {Op.LEVEL: ends[1], Op.LOW: np.minimum(*ends), Op.HIGH: np.maximum(*ends)}[op]
 
-    keys = {(step.op, step.payload) for step in tape.instructions if isinstance(step.payload, LevelKey)}
+    def moment(key: LevelKey, barrier: float) -> np.ndarray:
+        first, gone = level(key.asset, key.start), np.log(level(key.asset, key.time) / level(key.asset, key.start))
+        flat = np.abs(gone) < 1e-12  # which part has passed when the line is at the barrier
+        return np.clip(np.where(flat, 1.0, np.log(barrier / first) / np.where(flat, 1.0, gone)), 0.0, 1.0)
+
+    fixed = fixed_values(tape, dated.contract)
+    found = {(step.op, step.payload): moment(step.payload, fixed[step.operands[0]]) if step.op is Op.MOMENT
+             else read(step.op, step.payload) for step in tape.instructions if isinstance(step.payload, LevelKey)}
     leaves = [1.0 if leaf.kind is LeafKind.DISCOUNT else figure(dated.contract, leaf) for leaf in tape.leaves]
-    values = interpret(tape, leaves, levels={(op, key): read(op, key) for op, key in keys})
+    values = interpret(tape, leaves, levels=found)
     name = next(output.name for output in tape.outputs if output.kind == "price")
     paid = np.broadcast_to(outputs(tape, values)[name], WORST.shape)
     scale = 100.0 if dated.contract.notional is not None else 1.0

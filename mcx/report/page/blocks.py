@@ -65,10 +65,18 @@ class Sheet:
         return [(block.title, block.svg) for block in self.blocks if isinstance(block, Picture)]
 
 
+LEFT_OUT = "more with --json: {}"
+
+
 def cut(rows: Sequence[tuple[str, ...]], most: int) -> tuple[tuple[tuple[str, ...], ...], str]:
     """No more rows than a printed page has room for, and a word about those left out."""
     left = len(rows) - most
-    return tuple(map(tuple, rows[:most])), f"more with --json: {left}" if left > 0 else ""
+    return tuple(map(tuple, rows[:most])), LEFT_OUT.format(left) if left > 0 else ""
+
+
+def few(texts: Sequence[str], most: int) -> tuple[str, ...]:
+    """The same for sentences; the word about the rest is the last of them."""
+    return (*texts[:most], *([LEFT_OUT.format(len(texts) - most)] if len(texts) > most else []))
 
 
 def notes(*named: tuple[str, Sequence[str]]) -> tuple[Notes, ...]:

@@ -7,7 +7,7 @@ from collections.abc import Iterator
 
 from mcx.report.greek_results import Greek, GreeksResult
 from mcx.report.greek_view import JUMPS, greek_row, move, points, refused, rung_row
-from mcx.report.page.blocks import Facts, Picture, Sheet, Table, cut, notes
+from mcx.report.page.blocks import LEFT_OUT, Facts, Picture, Sheet, Table, cut, few, notes
 from mcx.report.page.price_sheet import INTERVALS, evidence, surroundings
 from mcx.report.pictures.draw import Bar, bars, curve
 from mcx.report.price_view import Scale, bounds
@@ -15,6 +15,7 @@ from mcx.report.scene import Scene
 from mcx.report.terminal import decimals, fixed
 
 MOST_ROWS, MOST_GROUPS, MOST_BARS, MOST_DELTAS, MOST_VOLS = 40, 4, 12, 4, 11
+MOST_SAID = 6
 
 
 def greeks_sheet(result: GreeksResult, scene: Scene | None) -> Sheet:
@@ -33,7 +34,8 @@ def greeks_sheet(result: GreeksResult, scene: Scene | None) -> Sheet:
     blocks += surroundings(scene, unit) if scene else ()
     blocks += [*_ladder(result, factor, places, unit), *_grid(result, factor, unit, places)]
     jumps = [f"{jump.kind} at {jump.place or 'an unnamed place'}" for jump in result.jumps]
-    blocks += notes(("not given", list(refused(result))), (JUMPS, jumps), ("choice of estimators", result.choices), ("warnings", result.warnings),
+    blocks += notes(("not given", few(list(refused(result)), MOST_SAID)), (JUMPS, few(jumps, MOST_SAID)),
+                    ("choice of estimators", few(result.choices, MOST_SAID)), ("warnings", result.warnings),
                     ("assumptions", result.assumptions or ("none",)))
     blocks += evidence(scene) if scene else ()
     blocks += notes(("not in the model", result.limits), ("read it with care", result.cautions))
@@ -107,7 +109,7 @@ def _grid(result: GreeksResult, factor: float, unit: str, places: int) -> Iterat
     at = {(point.spot_move, point.vol_move): point for point in result.grid}
     rows = tuple((move(spot), *("none" if at[spot, vol].refused else fixed(at[spot, vol].price * factor, places)
                                 for vol in vols[:MOST_VOLS])) for spot in result.spot_moves)
-    left = [f"more with --json: {len(vols) - MOST_VOLS} moves of vols"] if len(vols) > MOST_VOLS else []
+    left = [f"{LEFT_OUT.format(len(vols) - MOST_VOLS)} moves of vols"] if len(vols) > MOST_VOLS else []
     refused_ = dict.fromkeys(f"vol {points(point.vol_move)}, spot {move(point.spot_move)}: {point.refused}"
                              for point in result.grid if point.refused)
     yield Table(f"price in {unit} by moves of spots (down) and vols (across)",

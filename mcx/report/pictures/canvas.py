@@ -49,6 +49,8 @@ def scale(numbers: Iterable[float], start: float, end: float, zero: bool = False
     """A scale that shows all the numbers with some room around them; with `zero` also 0."""
     numbers = [*numbers, *([0.0] if zero else [])]
     low, high = min(numbers), max(numbers)
+    if high - low < 1e-9 * max(abs(low), abs(high)):  # rounding only
+        low = high = 0.5 * (low + high)
     room = 0.06 * (high - low) or 0.05 * abs(high) or 1.0
     below, above = (0.0 if zero and edge == 0.0 and low < high else room for edge in (low, high))
     return Scale(low - below, high + above, start, end)
@@ -102,11 +104,9 @@ class Canvas:
         node.text = _clean(words)
 
     def plate(self, x: float, y: float, words: str) -> None:
-        """Words behind x, or before it where the picture ends, on paper that hides what would run through them."""
-        wide = width(words)
-        left = x + 3 if x + 3 + wide <= self.width else x - 3 - wide
-        self._add("rect", "paper", x=left - 1, y=y - 10, width=wide + 2, height=12)
-        self.text(left, y, words)
+        """Words on paper that hides what would run through them."""
+        self._add("rect", "paper", x=x - 1, y=y - 10, width=width(words) + 2, height=12)
+        self.text(x, y, words)
 
     def segment(self, x1: float, y1: float, x2: float, y2: float, kind: str) -> None:
         self._add("line", kind, x1=x1, y1=y1, x2=x2, y2=y2)

@@ -110,19 +110,22 @@ def fan(title: str, said: str, what: Fan, ticks: Ticks, up: str) -> str:
 def curve(title: str, said: str, points: Sequence[tuple[float, float]], across: str, up: str,
           marked: Sequence[tuple[str, float]] = ()) -> str:
     """One line over a scale of numbers, both axes named; places that matter are marked with their names."""
-    x = Scale(min(place for place, _ in points), max(place for place, _ in points), LEFT, WIDTH - RIGHT)
+    numbers = [number for _, number in points]
+    left = _left(scale(numbers, 1.0, 0.0))
+    x = Scale(min(place for place, _ in points), max(place for place, _ in points), left, WIDTH - RIGHT)
     shown = sorted((x(place), fit(name, NAME)) for name, place in marked if x.low <= place <= x.high)
-    rows = _rows([(place, place + 6 + width(name)) for place, name in shown])
+    lefts = [_beside(place, name) for place, name in shown]
+    rows = _rows([(place, left - 1, left + width(name) + 3) for (place, name), left in zip(shown, lefts, strict=True)])
     top = TOP + ROW * (1 + max(rows, default=-1)) + 4
     foot = top + HEIGHT - TOP - BOTTOM
     canvas = Canvas(WIDTH, foot + BOTTOM + 14, title, said)
-    y = scale([number for _, number in points], foot, top)
-    canvas.across([(y(tick), written(tick)) for tick in y.ticks()], LEFT, WIDTH - RIGHT)
-    canvas.along([(x(tick), written(tick)) for tick in x.ticks(8)], foot, LEFT, WIDTH - RIGHT)
+    y = scale(numbers, foot, top)
+    canvas.across([(y(tick), written(tick)) for tick in y.ticks()], left, WIDTH - RIGHT)
+    canvas.along([(x(tick), written(tick)) for tick in x.ticks(8)], foot, left, WIDTH - RIGHT)
     for (place, _), row in zip(shown, rows, strict=True):
         canvas.segment(place, TOP - 6 + ROW * row, place, foot, "thread")
-    for (place, name), row in zip(shown, rows, strict=True):
-        canvas.plate(place, TOP + 4 + ROW * row, name)
+    for (_, name), left, row in zip(shown, lefts, rows, strict=True):
+        canvas.plate(left, TOP + 4 + ROW * row, name)
     canvas.line([(x(place), y(number)) for place, number in points])
     canvas.text(0, 10, up, kind="soft")
     canvas.text(WIDTH - RIGHT, canvas.height - 4, across, "end", "soft")
@@ -219,11 +222,12 @@ def _frame(title: str, said: str, times: Sequence[float], numbers: Sequence[floa
            up: str, zero: bool = False) -> tuple[Canvas, Scale, Scale]:
     """Axes of time and of numbers."""
     first, last = min(times), max(times)
-    x = Scale(first, last if last > first else first + 1.0, LEFT, WIDTH - right)
     y = scale(numbers, HEIGHT - BOTTOM, TOP, zero)
+    left = _left(y)
+    x = Scale(first, last if last > first else first + 1.0, left, WIDTH - right)
     canvas = Canvas(WIDTH, HEIGHT, title, said)
-    canvas.across([(y(tick), written(tick)) for tick in y.ticks()], LEFT, WIDTH - right)
-    canvas.along([(x(time), words) for time, words in ticks if first <= time <= last], HEIGHT - BOTTOM, LEFT,
+    canvas.across([(y(tick), written(tick)) for tick in y.ticks()], left, WIDTH - right)
+    canvas.along([(x(time), words) for time, words in ticks if first <= time <= last], HEIGHT - BOTTOM, left,
                  WIDTH - right)
     canvas.text(0, 10, up, kind="soft")
     return canvas, x, y
@@ -238,17 +242,30 @@ def _drawn(canvas: Canvas, x: Scale, y: Scale, series: Sequence[Series]) -> None
             canvas.mark(*place, number)
 
 
+def _left(y: Scale) -> float:
+    """The room for the numbers of a vertical axis."""
+    return max(LEFT, 7 + max(width(written(tick)) for tick in y.ticks()))
+
+
 def _sides(names: Sequence[str], shown: Sequence[str]) -> tuple[float, float]:
     """The room for names on the left and for numbers on the right."""
     left = 12 + min(NAME, max(width(name) for name in names))
     return left, (14 + max(width(words) for words in shown)) if shown else RIGHT
 
 
-def _rows(labels: Sequence[tuple[float, float]]) -> list[int]:
-    """For labels (start, end) from left to right, each behind a line down from its start: the first row below those that
-    its line would cross."""
+def _beside(place: float, name: str) -> float:
+    """Where a name begins that stands behind a place, or before it where the picture ends."""
+    return place + 3 if place + 3 + width(name) <= WIDTH else place - 3 - width(name)
+
+
+def _rows(labels: Sequence[tuple[float, float, float]]) -> list[int]:
+    """For labels (place, left, right) from left to right, each with a line down from its place: the first row below the
+    labels that the line would cross, on which there is room."""
     rows: list[int] = []
-    for start, _ in labels:
-        crossed = [row for row, (_, end) in zip(rows, labels, strict=False) if end > start]
-        rows.append(1 + max(crossed, default=-1))
+    for place, left, right in labels:
+        before = list(zip(rows, labels, strict=False))
+        row = 1 + max((other for other, (_, start, end) in before if start < place < end), default=-1)
+        while any(other == row and start < right and left < end for other, (_, start, end) in before):
+            row += 1
+        rows.append(row)
     return rows
