@@ -7,6 +7,7 @@ are laid out in one place, whatever they become.
 from __future__ import annotations
 
 import io
+import warnings
 from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -84,7 +85,8 @@ def _read(svg: str) -> ElementTree.Element:
 
 
 def _painted(root: ElementTree.Element) -> bytes:
-    """The shapes of a picture as PNG; letters in a font that comes with matplotlib."""
+    """The shapes of a picture as PNG; letters in a font that comes with matplotlib. What it has no letter for is drawn
+    as a box, of which matplotlib would warn on the standard error for each letter; an SVG leaves letters to its reader."""
     from matplotlib.backends.backend_agg import FigureCanvasAgg
     from matplotlib.figure import Figure
 
@@ -98,7 +100,9 @@ def _painted(root: ElementTree.Element) -> bytes:
         for node in part:
             _paint(axes, node, float(part.get("x")), float(part.get("y")))
     found = io.BytesIO()
-    FigureCanvasAgg(figure).print_png(found)
+    with warnings.catch_warnings():
+        warnings.filterwarnings("ignore", message="Glyph .* missing from")
+        FigureCanvasAgg(figure).print_png(found)
     return found.getvalue()
 
 
