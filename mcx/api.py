@@ -106,9 +106,11 @@ def greeks(
     random numbers for comparison: spots and forwards moved by that share, vols and correlations by that much, rates,
     yields and funding by a tenth of it. `assets` limits the sensitivities, and what moves, to some assets. `spot_moves`
     asks for a ladder of moves of all spots together, `vol_moves` for a grid of both. The other arguments
-    are those of `price`; `within` is about the price. Raises InputError, RequestError, Refusal.
+    are those of `price`; `within` is about the price, `reduction` what changes how paths are drawn. Raises InputError,
+    RequestError, Refusal.
     """
     from mcx.estimators.batches import check_paths
+    from mcx.estimators.drawn import wished_draws
     from mcx.estimators.plan import DEFAULT_SEED, check_fits, precision
     from mcx.estimators.wishes import wish_of
 
@@ -117,7 +119,7 @@ def greeks(
     wish = wish_of(estimator, bump, assets, spot_moves, vol_moves)
     seed = DEFAULT_SEED if seed is None else _seed(seed)
     threads = _threads(threads)
-    _reduction(reduction)
+    drawn = wished_draws(reduction)
     if record is not None:
         from mcx.report.record import check_free
 
@@ -129,7 +131,8 @@ def greeks(
             if name not in each.assets:
                 raise RequestError(f"'{each.title}' has no asset '{name}'{did_you_mean(name, each.assets)}")
     count = len(dated)
-    table = _greeks(made, dated, [wish] * count, [asked] * count, [seed] * count, threads, progress, notice)
+    table = _greeks(made, dated, [wish] * count, [asked] * count, [seed] * count, [drawn] * count, threads, progress,
+                    notice)
     if record is not None and not table.interrupted:
         from mcx.report.record import make_record, write_record
 
@@ -324,6 +327,7 @@ def replay(
     seeds = [_seed(each["seed"]) for each in runs]
     brackets = [each.get("bracket") for each in stored["results"]]
     pieces = [bracket and bracket["pieces"] for bracket in brackets]
+    reductions = [wished(each.get("reduction", NONE)) for each in runs]
     if verb == "verify":
         wishes = [(each["solve"], each["target"]) for each in runs]
         results = _verify(made, dated, wishes, asked, seeds, threads, progress, notice)
@@ -332,9 +336,8 @@ def replay(
 
         keys = ("estimator", "bump", "assets", "spot_moves", "vol_moves")
         wishes = [wish_of(*(each[key] for key in keys)) for each in runs]
-        results = _whole(_greeks(made, dated, wishes, asked, seeds, threads, progress, notice, pieces)).contracts
+        results = _whole(_greeks(made, dated, wishes, asked, seeds, reductions, threads, progress, notice, pieces)).contracts
     else:
-        reductions = [wished(each.get("reduction", NONE)) for each in runs]
         results = _whole(_price(made, dated, asked, seeds, reductions, threads, progress, notice, pieces)).prices
     return compare(stored, [each.to_dict() for each in results], environment())
 
@@ -455,6 +458,7 @@ def _greeks(
     wishes: Sequence[Wish],
     asked: Sequence[Precision],
     seeds: Sequence[int],
+    reductions: Sequence[tuple[str, ...]],
     threads: int | None,
     progress: Progress | None,
     notice: Callable[[str], None] | None,
@@ -468,11 +472,12 @@ def _greeks(
 
     results = []
     pieces = pieces or [None] * len(dated)
-    for ready, wish, precision, seed, number in zip(_ready(made, dated), wishes, asked, seeds, pieces, strict=True):
+    runs = zip(_ready(made, dated), wishes, asked, seeds, reductions, pieces, strict=True)
+    for ready, wish, precision, seed, reduction, number in runs:
         try:
             with finite(ready):
                 found = sensitivities(ready, made.market, wish, precision, seed=seed, threads=threads, pieces=number,
-                                      progress=progress, notice=notice)
+                                      progress=progress, notice=notice, reduction=reduction)
         except KeyboardInterrupt:
             if not results:
                 raise
@@ -582,5 +587,5 @@ def _reduction(reduction: str) -> None:
     from mcx.estimators.reduction.names import wished
 
     if wished(reduction):
-        raise RequestError(f"the variance reduction of sensitivities is 'none', not {reduction!r}: their estimators "
-                           f"choose their own controls")
+        raise RequestError(f"the variance reduction of 'verify' is 'none', not {reduction!r}: what it compares is "
+                           f"revalued on plain paths")
