@@ -12,7 +12,7 @@ from dataclasses import dataclass
 from mcx.estimators.batches import FEWEST_PATHS, Sampling
 from mcx.estimators.ready import Ready
 from mcx.estimators.reduction.catalogue import scheme_of
-from mcx.estimators.reduction.names import AUTO, NAMES, wished
+from mcx.estimators.reduction.names import AUTO, NAMES
 from mcx.estimators.reduction.sample import Sampler
 from mcx.estimators.reduction.scheme import Case
 from mcx.faults import RequestError
@@ -28,14 +28,12 @@ NOT_OF_SENSITIVITIES = {
 SUPPORTED = tuple(name for name in NAMES if name not in NOT_OF_SENSITIVITIES)
 
 
-def wished_draws(reduction: str) -> tuple[str, ...]:
-    """The methods asked for, as `names.wished`; raises RequestError for those that do not serve sensitivities."""
-    names = wished(reduction)
+def check_draws(names: tuple[str, ...]) -> None:
+    """Raises RequestError for methods that do not serve sensitivities."""
     for name in names:
         if name in NOT_OF_SENSITIVITIES:
             raise RequestError(f"no variance reduction '{name}' of sensitivities, since {NOT_OF_SENSITIVITIES[name]}; "
                                f"there are none, {', '.join(SUPPORTED)}")
-    return names
 
 
 @dataclass(frozen=True, slots=True)
