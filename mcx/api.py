@@ -498,7 +498,7 @@ def _verify(
     from mcx.estimators.verify import Bench
     from mcx.report.verify_summary import verify_result
 
-    ready = {each.dated.contract.title: each for each in _ready(made, dated)}
+    ready = {each.dated.contract.title: each for each in _ready(made, dated, apart=True)}
     benches: dict[tuple, Bench] = {}
     results = []
     for quote, wish, precision, seed in zip(made.quotes, wishes, asked, seeds, strict=True):
@@ -512,11 +512,11 @@ def _verify(
     return results
 
 
-def _ready(made: Request, dated: Sequence[DatedContract]) -> list[Ready]:
-    """Every contract as a program on the market; raises InputError with all that the tape refuses."""
+def _ready(made: Request, dated: Sequence[DatedContract], apart: bool = False) -> list[Ready]:
+    """Every contract as a program on the market (`apart`: see `prepare`); raises InputError with all that the tape refuses."""
     from mcx.estimators.ready import prepare
 
-    found = [prepare(each, made.market) for each in dated]
+    found = [prepare(each, made.market, apart) for each in dated]
     faults = [fault for _, wrong in found for fault in wrong]
     if faults:
         raise InputError(faults)

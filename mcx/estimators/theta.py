@@ -34,7 +34,7 @@ def theta(ready: Ready, market: Market, sampling: Sampling, base: Batches) -> Ba
     if ready.dated.watches:
         nodes = ready.market.nodes()
         tape = unroll(ready.dated, nodes=sorted({*nodes, *(node + DAY for node in nodes)}),
-                      makeup=ready.market.makeup(), pieces=ready.pieces).tape
+                      makeup=ready.market.makeup(ready.apart), pieces=ready.pieces).tape
         base, _ = Revaluer.of(tape, contract).price(market, sampling)
     tomorrow, _ = Revaluer.of(tape, contract, later=DAY).price(_nearer(market), sampling)
     return Batches(base.paths, tomorrow.means - base.means)
