@@ -9,6 +9,7 @@ is not in percent of the notional is in the contract's currency, for the whole n
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import ClassVar
 
 from mcx.report.results import Bracket, Planned, Result
 
@@ -99,6 +100,7 @@ class GreeksResult(Result):
     that of the middle. `bump`, `assets`, `spot_moves` and `vol_moves` repeat the request.
     """
 
+    MAIN: ClassVar[str] = "greeks"
     contract: str
     payoff: str
     valuation: str | None
@@ -145,3 +147,7 @@ class GreeksTable(Result):
     @property
     def interrupted(self) -> bool:
         return bool(self.not_valued) or any(result.interrupted for result in self.contracts)
+
+    def rows(self) -> list[dict]:
+        """The sensitivities of all contracts."""
+        return [{"contract": each.contract, **row} for each in self.contracts for row in each.rows()]

@@ -68,7 +68,7 @@ def show_verification(result: VerifyResult, page: Page) -> None:
             (each.input, each.asset, _move(each.half_width), scale.show(each.change, places),
              scale.show(each.standard_error, places), each.note) for each in result.inputs), words=2, last=1)
     page.heading("what would have to be true, each input alone")
-    page.table(("input", "", "value", "error", "move", "inside its doubt"), map(_implied, result.implied), words=2,
+    page.table(("input", "", "value", "error", "move", "inside its doubt"), map(implied_row, result.implied), words=2,
                last=1)
     _joint(result, page)
     _readings(result, scale, places, page)
@@ -99,7 +99,8 @@ def _move(share: float) -> str:
     return f"{100.0 * share:.4g} %"
 
 
-def _implied(each: ImpliedInput) -> tuple[str, ...]:
+def implied_row(each: ImpliedInput) -> tuple[str, ...]:
+    """Where an input alone makes the model meet the quote, as words."""
     if each.value is None:
         return each.input, each.asset, "none", "", f"{_signed(each.low)} to {_signed(each.high)}", NO_NUMBER[each.note]
     if each.input in IN_PERCENT:
