@@ -17,8 +17,8 @@ from mcx.checked.payoff import At, Continuous, Event, Pay, Payoff, Running
 from mcx.checked.term_values import DATED_TYPES, NUMERIC
 from mcx.dates.business_days import NotCovered, good_days
 from mcx.dates.dated_contract import Day, DatedContract, DatedEvent, DatedHit, Moment, Occasion, Update, Watch
-from mcx.dates.day_counts import ICMA, actual_365_fixed, year_fraction
-from mcx.dates.history import NO_HISTORY, History, history_of, said
+from mcx.dates.day_counts import ICMA, Regular, actual_365_fixed, year_fraction
+from mcx.dates.history import NO_HISTORY, History, history_of, said, said_of_today
 from mcx.dates.readable import readings
 from mcx.dates.rules import TermDays, part_of
 from mcx.faults import Fault, Place
@@ -139,7 +139,7 @@ class _Dating:
             assumptions=(*self.contract.assumptions, *dict.fromkeys(self.assumptions),
                          *said(self.contract, self.history)),
             warnings=tuple(dict.fromkeys(self.warnings)), history=replace(self.history, eve=self._eve()),
-            hits=tuple(self.hits))
+            hits=tuple(self.hits), regular=self._regular())
         live, idle, faults = readings(dated)
         faults += self.faults
         return (None if faults else _only(dated, live, idle)), faults
@@ -321,6 +321,12 @@ class _Dating:
             return regular.months / 12
         return year_fraction(ICMA, self.contract.start.date, regular.step(skipped), regular=regular)
 
+    def _regular(self) -> dict[str, tuple[Regular, int]]:
+        """The regular periods of every schedule that has them, where days are counted by them."""
+        if self.contract.day_count != ICMA:
+            return {}
+        return {name: found for name in self.schedules if (found := self.terms.regular(name))}
+
     def _due(self, pay: Pay, occasion: Occasion) -> Day:
         """When an amount is paid."""
         day = occasion.day
@@ -374,39 +380,12 @@ def _only(dated: DatedContract, live: frozenset[str], idle: frozenset[Place]) ->
         if updates or events:
             moments.append(replace(moment, updates=updates, events=events))
     watches = tuple(watch for watch in dated.watches if watch.running.name in live)
-    today = [_today(dated) for moment in moments if moment.day.date and moment.day.date == dated.valuation]
+    today = [said_of_today(dated.contract, dated.history, dated.valuation) for moment in moments if moment.day.date and moment.day.date == dated.valuation]
     hits = tuple(hit for hit in dated.hits if hit.event.place not in idle)
     by_day = [f"a hit of '{hit.watch.running.name}' counts for the calendar day on which it comes, weekends and "
               f"holidays included; a day runs from one close to the next" for hit in hits if hit.due and hit.days]
     return replace(dated, moments=tuple(moments), watches=watches, hits=hits,
                    assumptions=(*dated.assumptions, *today, *dict.fromkeys(by_day)))
-
-
-def _today(dated: DatedContract) -> str:
-    """Which level an observation on the valuation date uses, for each asset."""
-    names, day = dated.contract.assets, Day(0.0, dated.valuation)
-    history = dated.history
-    fixed = [name for number, name in enumerate(names)
-             if history.level(number, history.observed(number, day)) is not None]
-    if len(fixed) == len(names):
-        what = "that day's fixing"
-    elif fixed:
-        spots = [name for name in names if name not in fixed]
-        what = f"that day's fixing of {', '.join(fixed)} and the market's spot of {', '.join(spots)}, not fixed yet"
-    else:
-        what = "the market's spot"
-    halves = "".join(_half_fixed(history, number, day) for number in range(len(names)))
-    return f"the observation on {dated.valuation}, the valuation date, uses {what}{halves}"
-
-
-def _half_fixed(history: History, number: int, day: Day) -> str:
-    """Says that one fixing alone of a composite level, the asset's or the rate's, is left out."""
-    parts = history.names[number] if history.names else ()
-    lacking = history.missing(number, history.observed(number, day).date)
-    if len(lacking) != 1 or len(parts) == 1 or history.level(number, history.observed(number, day)) is not None:
-        return ""
-    (there,) = (name for name in parts if name not in lacking)
-    return f"; that day's fixing of {there} is left out, for that of {lacking[0]} is not in"
 
 
 def _years(start: Day, day: Day) -> float:
