@@ -154,6 +154,30 @@ def test_a_composite_level_needs_the_rate_of_its_day(tmp_path: Path):
     assert sorted(found) == pytest.approx([38.25 / 1.25, 44 / 1.25, 48.5 / 1.25])
 
 
+@pytest.mark.parametrize(("day", "inside", "said"), [
+    ("2027-09-01", ("lantern", "USD per EUR"), ""),
+    ("2027-09-01", ("lantern",), "that day's fixing of lantern is left out, for that of USD per EUR is not in"),
+    ("2027-09-01", ("USD per EUR",), "that day's fixing of USD per EUR is left out, for that of lantern is not in"),
+    ("2027-09-01", (), ""),
+    ("2027-07-01", ("lantern",),
+     "fixings of lantern on days without one of USD per EUR are left out, the first of them of 2027-07-01")])
+def test_one_fixing_alone_of_a_composite_level_is_said_to_be_left_out(day: str, inside: tuple[str, ...], said: str):
+    """It is half of a level: on the valuation date the market's spots count, earlier nothing reads it."""
+    levels = {key: level for key, level in LEVELS.items() if key[1] < "2027-09"}
+    levels |= {("USD per EUR", when): 1.25 for when in ("2027-03-01", "2027-06-01")} | {
+        (name, day): {"lantern": 44.0, "USD per EUR": 1.25}[name] for name in inside}
+    text = (WORST_OF.replace("payoff:", "conversion: {lantern: composite}\npayoff:")
+            + market("2027-09-01").replace("lantern: {spot: 47, currency: EUR", "lantern: {spot: 50, currency: USD")
+            .replace("rates: {EUR: 2%}", "rates: {EUR: 2%, USD: 3%}\nfx: {USD per EUR: {spot: 1.1, vol: 8%}}").replace(
+                "50%}\n", "50%, harbour/USD per EUR: 0%, lantern/USD per EUR: 0%}\n") + fixings(levels))
+    found = prepare(text)
+    left_out = [each for each in found.dated.assumptions if "left out" in each]
+    assert len(left_out) == bool(said) and all(said in each for each in left_out)
+    fixed = day == "2027-09-01" and len(inside) == 2
+    assert any("that day's fixing of lantern and the market's spot of harbour" in each
+               for each in found.dated.assumptions) == fixed
+
+
 # What happened
 
 TOUCH = """contract: touch

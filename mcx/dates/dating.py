@@ -396,7 +396,18 @@ def _today(dated: DatedContract) -> str:
         what = f"that day's fixing of {', '.join(fixed)} and the market's spot of {', '.join(spots)}, not fixed yet"
     else:
         what = "the market's spot"
-    return f"the observation on {dated.valuation}, the valuation date, uses {what}"
+    halves = "".join(_half_fixed(history, number, day) for number in range(len(names)))
+    return f"the observation on {dated.valuation}, the valuation date, uses {what}{halves}"
+
+
+def _half_fixed(history: History, number: int, day: Day) -> str:
+    """Says that one fixing alone of a composite level, the asset's or the rate's, is left out."""
+    parts = history.names[number] if history.names else ()
+    lacking = history.missing(number, history.observed(number, day).date)
+    if len(lacking) != 1 or len(parts) == 1 or history.level(number, history.observed(number, day)) is not None:
+        return ""
+    (there,) = (name for name in parts if name not in lacking)
+    return f"; that day's fixing of {there} is left out, for that of {lacking[0]} is not in"
 
 
 def _years(start: Day, day: Day) -> float:

@@ -123,6 +123,12 @@ def said(contract: Contract, history: History) -> list[str]:
     later = sorted({date for levels in history.published.values() for date in levels if date > today} if today else ())
     if later:
         found.append(f"fixings after the valuation date are left out, the first of them of {later[0]}")
+    for asset, *rates in history.names:
+        levels, rated = history.published.get(asset, {}), history.published.get(rates[0] if rates else asset, {})
+        alone = sorted(date for date in levels if date not in rated and date < today)
+        if alone:
+            found.append(f"fixings of {asset} on days without one of {rates[0]} are left out, the first of them of "
+                         f"{alone[0]}")
     for asset, dates in contract.adjustments.items():
         for since, known in dates.items():
             when = "" if today is None or since <= today else "; not in force yet, so it changes nothing"

@@ -83,7 +83,7 @@ def unroll(
     walk = Walk(dated, nodes=nodes)
     walk.run()
     observed = drop_dead_code(walk.builder.tape(walk.ledger.outputs()))
-    missing = [] if given else walk.observations.missing(observed)
+    missing = walk.observations.missing(observed, given)
     wrong = walk.faults or unknown_laws(observed, makeup)
     faults = [*wrong, *walk.observations.unstated.values(), *missing]
     if faults:

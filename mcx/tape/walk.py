@@ -17,7 +17,7 @@ from mcx.checked.payoff import Action, Assign, Deliver, End, Event, Pay, Running
 from mcx.dates.dated_contract import DatedContract, DatedEvent, Day, Moment, Occasion, Update
 from mcx.faults import Fault, Place
 from mcx.tape.builder import Builder
-from mcx.tape.formulas import Formulas, Scene, Unreadable, Values
+from mcx.tape.formulas import Formulas, Lacking, Scene, Unreadable, Values
 from mcx.tape.hits import Due, Hits, Span, Stretch, which_first
 from mcx.tape.ledger import Ledger, Payment
 from mcx.tape.observations import Observations
@@ -29,6 +29,7 @@ from mcx.tape.state import Accruing, FixedAmount, PastEvent, State
 
 AT_A_HIT = ("shares cannot be delivered at the moment of a hit that is watched continuously: their level on the "
             "delivery date, which depends on that moment, is not known; deliver on a date")
+NO_NUMBER = "'{}' is no number before its last fixing, on {}, and what is watched all the time is held against numbers"
 PAST_HIT = ("'{}' came true before the valuation date, and at which moment is not read, nor what was paid then; a "
             "contract that has ended needs no price; otherwise watch it on dates, whose fixings tell the day")
 
@@ -87,10 +88,15 @@ class Walk:
                 try:
                     self._event(event, moment.events[: number + 1])
                 except Unreadable as trouble:
-                    self.faults.append(trouble.fault)
+                    self._note(trouble)
             if moment.day.time <= 0.0:
                 self._note_state(moment.day)
         self._hit_until(math.inf)
+
+    def _note(self, trouble: Unreadable) -> None:
+        """A fault, unless fixings that are missing say it."""
+        if not isinstance(trouble, Lacking):
+            self.faults.append(trouble.fault)
 
     def _note_state(self, day: Day) -> None:
         """The running values that are known after a day of the past."""
@@ -115,7 +121,7 @@ class Walk:
                 try:
                     self._hit(stretch)
                 except Unreadable as trouble:
-                    self.faults.append(trouble.fault)
+                    self._note(trouble)
 
     def _hit(self, stretch: Stretch) -> None:
         event = stretch.hit.event
@@ -124,7 +130,7 @@ class Walk:
         if watch.start.time < 0.0 and stretch.start == stretch.end and self.builder.number(before) == 1.0:
             raise Unreadable(event.at.place, PAST_HIT.format(watch.running.name))
         turns = self._newly(before, after, event.at.place)
-        if self.builder.number(turns) == 0.0:
+        if self.builder.number(turns) == 0.0 or self.observed[watch.running.name].lacking:
             return
         scene = self.hits.scene(stretch, after)
         condition = self.formulas.one(event.condition, scene) if event.condition else self.builder.constant(1.0)
@@ -150,7 +156,7 @@ class Walk:
         try:
             return self.formulas.read(formula, Scene(spot=_not_at_start, running=_not_at_start))
         except Unreadable as trouble:
-            self.faults.append(trouble.fault)
+            self._note(trouble)
             return (self.builder.constant(0.0),)
 
     def _observed_level(self, name: str, place: Place, occasion: Occasion | None) -> Values:
@@ -166,9 +172,15 @@ class Walk:
         known = [self.builder.number(value) for value in first]
         if None not in known:
             self.state.terms[name] = tuple(known)
-        if occasion.day.time < days[-1].time if occasion else None in known:
-            when = f"read on {occasion.day}" if occasion else "read before"
-            raise Unreadable(place, f"'{name}' is fixed on {days[-1]} only and {when}")
+        if occasion and occasion.day.time < days[-1].time:
+            raise Unreadable(place, f"'{name}' is fixed on {days[-1]} only and read on {occasion.day}")
+        if occasion is None and None in known:
+            unknown = [(asset, day) for day, row in zip(days, levels, strict=True)
+                       for asset, level in enumerate(row) if self.builder.number(level) is None]
+            text = NO_NUMBER.format(name, days[-1])
+            if any(self.dated.history.observed(asset, day).time > 0.0 for asset, day in unknown):
+                raise Unreadable(place, text)
+            raise Lacking(place, text, unknown)
         return first
 
     def _update(self, update: Update) -> None:
