@@ -27,13 +27,13 @@ WATCHABLE = ("lowest", "highest", "ever", "always")
 
 
 def date_contract(
-    contract: Contract, valuation: datetime.date | None, history: History = NO_HISTORY
+    contract: Contract, valuation: datetime.date | None, history: History = NO_HISTORY, otherwise: bool = False
 ) -> tuple[DatedContract | None, list[Fault]]:
     """The contract with every date known, and the faults that only dates can show.
 
     Times are years from `valuation`; without one, from the contract's start. Optional date terms that are not
     stated narrow nothing, and nothing happens at them. A contract at fault gives no dated one, but the faults of the
-    dates that can be read in it.
+    dates that can be read in it. Of a contract read `otherwise`, statements that only its own reading needs are none.
     """
     good, faults = good_days(contract.calendar) if contract.calendar else (None, [])
     paying, more = good_days(contract.payment_calendar) if contract.payment_calendar else (good, [])
@@ -48,7 +48,7 @@ def date_contract(
     schedules = {name: days for name, days in found.items() if days}
     unread = frozenset(name for name in dated_terms if name in contract.at_fault or found.get(name) == ())
     start = Day(0.0) if contract.textbook else terms.day(contract.start.date)
-    dated, faults = _Dating(contract, valuation, schedules, unread, start, terms, history).dated()
+    dated, faults = _Dating(contract, valuation, schedules, unread, start, terms, history).dated(otherwise)
     faults += terms.faults + _wrong_lengths(contract, schedules)
     return (None if faults or contract.at_fault else dated), sorted(set(faults))
 
@@ -119,7 +119,7 @@ class _Dating:
         self.hits: list[DatedHit] = []
         self.unwatched = False  # whether a watch is at fault, so that its running value has no date
 
-    def dated(self) -> tuple[DatedContract | None, list[Fault]]:
+    def dated(self, otherwise: bool) -> tuple[DatedContract | None, list[Fault]]:
         self._refuse_dates_before_start()
         for running in self.payoff.running:
             self._observe(running)
@@ -128,7 +128,8 @@ class _Dating:
         days = sorted({*self.updates, *self.events}, key=lambda day: day.time)
         if not self._can_be_read():
             return None, self.faults
-        self._refuse_needless_statements(days)
+        if not otherwise:
+            self._refuse_needless_statements(days)
         if not days and not self.hits and not self.faults:
             self._fault(self.contract.place, "nothing is ever observed or paid: no event has a date")
         dated = DatedContract(
