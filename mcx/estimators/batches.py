@@ -137,5 +137,5 @@ class Sampling:
 def check_paths(paths: int | None) -> None:
     """Raises RequestError for too few paths to have batches of."""
     if paths is not None and paths < FEWEST_PATHS:
-        raise RequestError(f"sensitivities need at least {FEWEST_PATHS:,} paths, since their errors come from "
+        raise RequestError(f"'greeks' and 'verify' need at least {FEWEST_PATHS:,} paths, since their errors come from "
                            f"{BATCHES} parts of the run; asked for were {paths:,}")

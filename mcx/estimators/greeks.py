@@ -47,6 +47,8 @@ NEAR = 1.0 / 12.0  # years
 NEARBY = 0.01  # of the spots
 ESTIMATORS = ("auto", "pathwise", "likelihood", "mixed")
 REVALUATION = "revaluation"
+AS_ONE = ("assets that move as one are watched together: moved alone its vol would part them, and then of their joint law "
+          "only bounds are known")
 
 
 @dataclass(frozen=True, slots=True)
@@ -156,6 +158,8 @@ class _Run:
         begun = time.perf_counter()
         kinks = {self.numbers.index(number): reason
                  for number, reason in without_derivative(self.market, self.contract).items()}
+        kinks |= {k: AS_ONE for k, number in enumerate(self.numbers) if number.kind == "vol"
+                  and number.subject in {self.contract.assets[asset] for asset in self.ready.unrolled.joined}}
         values = [*self._first(kinks), *self._second()]
         base, price = self.base or self.revaluer.price(self.market, self.sampling)
         comparison: list[Value] = []

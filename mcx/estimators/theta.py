@@ -35,7 +35,7 @@ def theta(ready: Ready, market: Market, sampled: Callable[[Ready], Sampling], ba
     if ready.dated.watches:
         nodes = ready.market.nodes()
         ready = replace(ready, unrolled=unroll(ready.dated, nodes=sorted({*nodes, *(node + DAY for node in nodes)}),
-                                               makeup=ready.market.makeup(), pieces=ready.pieces))
+                                               makeup=ready.market.makeup(ready.apart), pieces=ready.pieces))
         sampling = sampled(ready)
         base, _ = Revaluer.of(ready.unrolled.tape, contract, pairs=pairs).price(market, sampling)
     later = Revaluer.of(ready.unrolled.tape, contract, later=DAY, pairs=pairs)

@@ -285,7 +285,9 @@ class Walk:
 
     def _deliver(self, action: Deliver, event: Place, day: Day, due: Due, flag: int, scene: Scene) -> None:
         shares = Shares(self.dated.contract, self.formulas, self.observations)
-        worth, certain = shares.worth(action, day, due.latest, scene, lambda chosen: self._settled(chosen, day))
+        worth, certain, counted = shares.worth(action, day, due.latest, scene, lambda flag: self._settled(flag, day))
+        if not counted:
+            self.state.uncounted[action] = None
         if day.time <= 0.0 and self.builder.number(flag) == 1.0:
             self.state.deliveries += certain
         if worth is not None:
