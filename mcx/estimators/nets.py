@@ -111,13 +111,13 @@ def net_estimates(sums: ScrambleSums, scrambles: int | None = None) -> tuple[Est
     quantile = float(stdtrit(count - 1, 0.975))
     spread = np.sqrt(squares.mean(axis=0) / sums.points)
     return tuple(
-        Estimate(float(means[:, k].mean()), _deviation(means[:, k], spread[k] / sums.points) / math.sqrt(count),
+        Estimate(float(means[:, k].mean()), deviation(means[:, k], spread[k] / sums.points) / math.sqrt(count),
                  count * sums.points, quantile)
         for k in range(outputs)
     )  # fmt: skip
 
 
-def _deviation(means: np.ndarray, part: float) -> float:
+def deviation(means: np.ndarray, part: float) -> float:
     """The standard deviation of a scramble's mean, from those of all; `part`: that of one path, over the points.
 
     Points so even that nearly every scramble has as many on each side of a jump give means that are equal, but for a

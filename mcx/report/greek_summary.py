@@ -40,7 +40,7 @@ def greeks_result(ready: Ready, market: Market, wish: Wish, found: Found) -> Gre
         paths=found.price.paths,
         seconds=found.seconds,
         seed=found.seed,
-        reduction=NO_REDUCTION,
+        reduction=",".join(found.reduction) or NO_REDUCTION,
         interrupted=found.interrupted,
         estimator=wish.estimator,
         bump=wish.bump,
@@ -71,7 +71,7 @@ CONVENTIONS = (
 
 def _greek(value: Value) -> Greek:
     what, estimate = value.what, value.estimate
-    return Greek(what.name, what.subject, _tenor(what), estimate.value, estimate.standard_error, what.unit,
+    return Greek(what.name, what.subject, _tenor(what), estimate.value, estimate.standard_error, estimate.interval95, what.unit,
                  value.estimator, resolved(estimate), value.note)
 
 

@@ -5,8 +5,8 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 from mcx.checked.payoff import Pay
+from mcx.dates.accrual import by_calendar_days, part_passed
 from mcx.dates.dated_contract import DatedContract, Day
-from mcx.dates.day_counts import year_fraction
 from mcx.estimators.ready import Ready
 from mcx.leaves.market_map import MarketMap
 from mcx.report.distances import distances
@@ -33,22 +33,20 @@ def owed_amounts(dated: DatedContract, state: State, market: MarketMap) -> tuple
 
 def accrued(dated: DatedContract, state: State) -> float:
     """Interest of certain coupons in the period that runs on the valuation date, in the unit of the price: the coupon
-    times the part of its period that has passed, by the contract's day count (without one, by calendar days)."""
-    today, count = dated.valuation, dated.contract.day_count
-    total = 0.0
-    for each in state.accruing:
-        since, until = each.since.date, each.occasion.day.date
-        passed = (today - since).days / (until - since).days
-        if count and "ICMA" not in count:
-            passed = year_fraction(count, since, today) / year_fraction(count, since, until)
-        total += each.amount * passed
-    return total
+    times the part of its period that has passed."""
+    return sum((each.amount * part_passed(dated, each.occasion, each.since) for each in state.accruing), 0.0)
 
 
 def standing(ready: Ready) -> Iterator[str]:
     """Shares that are owed; that a contract has ended, and what is still to come of it."""
     state = ready.unrolled.state
     yield from to_deliver(ready.dated, state)
+    for leg in dict.fromkeys(action.leg for action in state.uncounted):
+        yield (f"how many shares '{leg}' delivers is not fixed yet: fractions are taken to be delivered as well, not "
+               "paid in cash")
+    for why in dict.fromkeys(by_calendar_days(ready.dated, each.occasion) for each in state.accruing):
+        if why:
+            yield f"interest accrues by calendar days: {why}"
     if state.ended is None:
         return
     due = [str(each.due) for each in state.payments if each.owed and each.amount]

@@ -213,9 +213,9 @@ def _margin(found: Verification) -> MarginResult | None:
     margin = found.money.margin
     if margin is None:
         return None
-    return MarginResult(found.quote.issue_price, margin.amount.value, margin.amount.standard_error, margin.share.value,
-                        margin.currency.value, margin.currency.standard_error, margin.per_year.value,
-                        margin.per_year.standard_error)
+    return MarginResult(found.quote.issue_price, found.valuation.ready.dated.begun, margin.amount.value,
+                        margin.amount.standard_error, margin.share.value, margin.currency.value,
+                        margin.currency.standard_error, margin.per_year.value, margin.per_year.standard_error)
 
 
 def _solved(solved: Solved) -> Iterator[SolvedTerm]:
