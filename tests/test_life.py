@@ -271,6 +271,64 @@ def test_value_and_what_was_paid_is_a_martingale(contract: str, dates: tuple[str
     assert error < 0.015
 
 
+def test_it_is_a_martingale_under_cash_dividends_and_a_quanto():
+    """What is left of the spot without its dividends is lognormal and drifts under the measure of the contract's
+    currency; the level is that and the dividends still to come, at the growth in the asset's own."""
+    start, then = date(2026, 12, 1), date(2027, 9, 20)
+    own, pull, exes = 0.04, -0.8 * VOL * 0.09, (date(2027, 5, 10), date(2027, 11, 10))
+
+    def to_come(day: date) -> float:
+        return sum(2.5 * exp(-own * (ex - day).days / 365) for ex in exes if ex > day)
+
+    asset = (f"currency: USD, dividends: [{', '.join(f'{{ex: {ex}, cash: 2.5}}' for ex in exes)}], "
+             "quanto: {fx_vol: 9%, fx_correlation: -80%, fx: EUR per USD}")
+    now, later = (request_of(TAIL + market(day, 100.0).replace(f"currency: EUR, yield: {YIELD:.4%}", asset).replace(
+        f"EUR: {RATE:.4%}}}\nfunding", f"EUR: {RATE:.4%}, USD: 4%}}\nfunding")) for day in (start, then))
+    days = [*OBSERVED[:3], then]
+    times = np.array([(day - start).days / 365 for day in days])
+    steps = np.diff([0.0, *times])
+    normals = np.random.default_rng(11).standard_normal((480, len(times)))
+    logs = np.cumsum((own - pull - VOL**2 / 2) * steps + VOL * np.sqrt(steps) * normals, axis=1)
+    found = []
+    for number, path in enumerate((100.0 - to_come(start)) * np.exp(logs)):
+        levels = [float(left) + to_come(day) for left, day in zip(path, days, strict=True)]
+        history = {str(day): level for day, level in zip(days[:3], levels, strict=False)}
+        value = on(later, then, levels[-1], history).price(256, SEED + number).mean
+        found.append(value * exp(-(RATE + SPREAD) * times[-1]))
+    today = ready_of(now).price(1 << 16, SEED)
+    moved = np.exp(logs - (own - pull) * times) - 1.0  # of mean zero, so that they sharpen the mean as controls
+    (mean, *slopes), *_ = np.linalg.lstsq(np.column_stack([np.ones(len(found)), moved]), found, rcond=None)
+    left_over = found - mean - moved @ slopes
+    error = np.std(left_over, ddof=5) / sqrt(len(found))
+    assert abs(mean - today.mean) < 4 * sqrt(error**2 + today.error**2)
+    assert error < 0.002
+
+
+def test_it_is_a_martingale_where_the_contract_states_what_it_hit():
+    """A barrier watched all the time: what lies before the later day is drawn by the law of a bridge, and stated."""
+    start, then, level = date(2026, 12, 1), date(2027, 9, 20), 80.0
+    contract = ("contract: watched\n" + HEAD.replace("settlement", "HAPPENEDday_count: Actual/360\nsettlement")
+                + "payoff: barrier_reverse_convertible\nterms: {initial: 100, strike: 100%, knock_in: 80%, coupon: 6%, "
+                "watched: {continuous: [2026-12-01, final]}, coupon_dates: [2027-06-01, 2027-12-01], "
+                "final: 2027-12-01, maturity: final}\n---\n")
+    stated = {hit: request_of(contract.replace("HAPPENED", f"happened: {{hit: {{{then}: {hit}}}}}\n")
+                              + market(then, 100.0)) for hit in ("true", "false")}
+    time = (then - start).days / 365
+    rng = np.random.default_rng(5)
+    logs = (RATE - YIELD - VOL**2 / 2) * time + VOL * sqrt(time) * rng.standard_normal(240)
+    found = []
+    for number, (log_level, uniform) in enumerate(zip(logs, rng.random(240), strict=True)):
+        above, ends = log(100.0 / level), log_level + log(100.0 / level)
+        hit = ends <= 0.0 or uniform < exp(-2 * above * ends / (VOL**2 * time))
+        ready = on(stated["true" if hit else "false"], then, 100.0 * exp(log_level))
+        value = ready.price(256, SEED + number).mean * exp(-(RATE + SPREAD) * time)
+        found.append(value + paid_before(ready, start))
+    today = prepare(contract.replace("HAPPENED", "") + market(start, 100.0)).price(1 << 16, SEED)
+    error = np.std(found, ddof=1) / sqrt(len(found))
+    assert abs(np.mean(found) - today.mean) < 4 * sqrt(error**2 + today.error**2)
+    assert error < 0.01
+
+
 def paid_before(ready: Ready, start: date) -> float:
     """What a contract has paid before the valuation date, discounted to its start."""
     return sum(each.amount * exp(-(RATE + SPREAD) * (each.due.date - start).days / 365)
