@@ -9,6 +9,7 @@ from math import exp, log, pi, sqrt
 
 import numpy as np
 import pytest
+from front_door import EXAMPLES
 from helpers import Ready, prepare, ready_of, request_of
 from scipy.special import ndtr, ndtri
 
@@ -464,3 +465,32 @@ def test_history_under_cash_dividends_and_other_currencies(tmp_path, how: str):
     assert found.keys() == other.keys() and len(found) > 5
     for key, each in found.items():
         assert each.value == pytest.approx(other[key].value, rel=1e-9, abs=1e-12), key
+
+
+# The demo trades
+
+
+def test_day_400_of_a_memory_autocall():
+    """The first demo trade: two coupons paid, two missed and in memory, neither called nor knocked in."""
+    file = EXAMPLES / "seasoned_autocall.yaml"
+    state = mcx.readback(file).state
+    assert (date.fromisoformat(state.valuation) - date(2026, 11, 16)).days == 400
+    held = {(each.what, each.date): each.happened for each in state.past}
+    assert [held["coupon paid", day] for day in ("2027-02-16", "2027-05-17", "2027-08-16", "2027-11-16")] == [
+        "yes", "yes", "no", "no"]
+    assert held["called", "2027-11-16"] == "no" and state.ended == ""
+    assert {each.name: each.text for each in state.running} == {"hit": "no", "missed": "0.038"}
+    found = mcx.price(file, paths=1 << 14)
+    assert [each.date for each in found.ends][0] == "2028-02-16" and found.owed == ()
+
+
+def test_a_note_inside_its_averaging_period():
+    """The second: its initial level the lowest of three closes, seven of thirteen months fixed, the last of them on the
+    valuation date itself."""
+    file = EXAMPLES / "seasoned_asian_tail.yaml"
+    state = mcx.readback(file).state
+    dates = sorted({each.date for each in state.fixings})
+    assert len([day for day in dates if day < "2024"]) == 3
+    assert len([day for day in dates if day > "2027"]) == 7 and dates[-1] == state.valuation == "2027-12-01"
+    text = mcx.price(file, paths=64).assumptions
+    assert any("the observation on 2027-12-01, the valuation date, uses that day's fixing" in each for each in text)
