@@ -28,6 +28,7 @@ from mcx.faults import Refusal, RequestError
 from mcx.machine.draw_plan import DrawPlan
 from mcx.machine.orders import bridge, early_bridge
 from mcx.machine.run import draws
+from mcx.tape.adjoint import by_normals
 from mcx.tape.interpret import interpret
 
 SEED = 0x510E527FADE682D1
@@ -109,6 +110,32 @@ def test_a_shift_carries_its_weight():
     np.testing.assert_allclose(found[weight], ratio, rtol=1e-9)
     for one, output in zip(tape.outputs, moved.outputs, strict=True):
         np.testing.assert_allclose(found[output.value], plain[one.value] * ratio, rtol=1e-9, atol=1e-13)
+
+
+@pytest.mark.parametrize("name", ["average", "barrier", "exchange"])
+def test_slopes_by_normals_are_those_of_differences(name: str):
+    """The price's derivative by each normal at a point where something is paid."""
+    ready = made(name, CURVED)
+    tape, leaves = ready.unrolled.tape, ready.market.values(ready.unrolled.tape.leaves)
+    result = tape.outputs[0].value
+    point = np.abs(np.random.default_rng(SEED).normal(size=tape.normals)) * [1.0, -0.5][name == "exchange"]
+    point[::2] = np.abs(point[::2])
+    moved = 1e-5 * np.eye(tape.normals)
+    up, down = (interpret(tape, leaves, point[:, None] + sign * moved)[result] for sign in (1.0, -1.0))
+    found = by_normals(tape, interpret(tape, leaves, point), result)
+    assert np.abs(found).min() > 0.01
+    np.testing.assert_allclose(found, (up - down) / 2e-5, rtol=1e-5)
+
+
+def test_the_mode_is_where_the_slope_vanishes():
+    """Of a call far out of the money: log payoff and log density rise and fall alike, by the closed form's own terms."""
+    far = made("average", FLAT.replace("spot: 100", "spot: 55"))
+    found = mode(Case(far, SEED))
+    tape, leaves = far.unrolled.tape, far.market.values(far.unrolled.tape.leaves)
+    values = interpret(tape, leaves, found)
+    slope = by_normals(tape, values, tape.outputs[0].value) / values[tape.outputs[0].value]
+    assert np.linalg.norm(found) > 3.0
+    np.testing.assert_allclose(slope, found, atol=0.02 * np.linalg.norm(found))
 
 
 def test_the_mode_of_a_digital_is_its_edge():
