@@ -29,7 +29,7 @@ from mcx.tape.rules import Value
 FARTHEST = 12.0  # standard deviations along a straight path
 STEPS, COARSE = 481, 97  # along one; along each of several
 DIRECTIONS = 16  # of straight paths, where there are several assets, besides each alone and all together
-CLIMBS, MOVES = 60, 12
+CLIMBS, MOVES = 25, 12
 ENOUGH = 1e-4  # of the log of payoff times density, that a climb gains at least
 SMALLEST = 0.3  # a mode nearer than this is where plain paths are anyway
 TINY = 1e-290

@@ -16,6 +16,7 @@ from mcx.estimators.nets import clock
 from mcx.estimators.plan import precision
 from mcx.estimators.price import value
 from mcx.estimators.ready import prepare
+from mcx.estimators.reduction import choice
 from mcx.estimators.reduction.antithetic import paired
 from mcx.estimators.reduction.catalogue import conflict, scheme_of
 from mcx.estimators.reduction.choice import CHOICES, best
@@ -183,6 +184,42 @@ def test_the_choice_beats_plain_sampling_and_is_always_the_same():
     assert chosen.results == named.results
     assert chosen.price.standard_error < 0.03 * plain.price.standard_error
     assert abs(chosen.price.value - plain.price.value) < 4 * plain.price.standard_error
+
+
+def test_a_choice_costs_no_more_than_its_share(monkeypatch: pytest.MonkeyPatch):
+    """What is tried is what can be paid: nothing, nothing that needs another tape, or everything, and the note says what
+    was left out; a longer run can pay more."""
+    ready = made("average", FLAT)
+    tried = []
+    monkeypatch.setattr(choice, "scheme_of", lambda case, names, known=None: (tried.append(names), scheme_of(
+        case, names, known))[1])
+    rewriting = {names for names in CHOICES if set(names) & {"controls", "importance"}}
+    for seconds, expected in ((1e-6, {()}), (0.2, set(CHOICES[:2])), (5.0, set(CHOICES))):
+        tried.clear()
+        monkeypatch.setattr(choice, "SECOND", seconds * 1e9)
+        scheme = best(Case(ready, SEED), precision(20_000, None, None))
+        assert expected <= set(tried) and (set(tried) <= expected or not set(tried) & rewriting)
+        assert ("would cost too much" in scheme.notes[-1]) == (expected != set(CHOICES))
+    monkeypatch.setattr(choice, "SECOND", 0.2e9)
+    tried.clear()
+    best(Case(ready, SEED), precision(1 << 26, None, None))
+    assert ("controls",) in tried
+
+
+def test_the_pilot_of_a_precision_is_worth_what_plain_sampling_would_take(monkeypatch: pytest.MonkeyPatch):
+    """A thousandth of the half-width takes a million times the paths, which pays for more trials."""
+    ready = made("average", FLAT)
+    monkeypatch.setattr(choice, "SECOND", 0.0)
+    wide, narrow = (best(Case(ready, SEED), precision(None, within, None)) for within in ("1", "0.001"))
+    assert wide.names == () and "controls" in narrow.names
+
+
+def test_a_pilot_of_controls_that_costs_too_much_is_refused():
+    """With the reason; the same one is run where it may cost that."""
+    ready = made("average", FLAT)
+    with pytest.raises(Refusal, match=r"since a pilot of 8,192 paths costs too much for this run"):
+        scheme_of(Case(ready, SEED, most=1e4), ("controls",))
+    assert scheme_of(Case(ready, SEED, most=1e9), ("controls",)).fit_paths == 8192
 
 
 @pytest.mark.parametrize("reduction", ["none", "controls", "antithetic", "sobol-bridge", "stratified"])
