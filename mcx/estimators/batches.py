@@ -15,7 +15,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from mcx.estimators.estimate import Estimate, estimates
-from mcx.estimators.nets import Net, deviation, net_estimates, on_net
+from mcx.estimators.nets import Net, least_deviation, net_estimates, on_net
 from mcx.faults import RequestError
 from mcx.machine.draw_plan import PLAIN, DrawPlan
 from mcx.machine.run import Notice, Stream, run
@@ -29,8 +29,8 @@ FEWEST_PATHS = BATCHES * GROUP  # so that every part has a whole group, or half 
 class Batches:
     """paths (parts,) of each part; means (parts, quantities) over the paths of each part.
 
-    shares  of scrambles (quantities,): about how far one path moves the mean of a scramble; None elsewhere. Points may be
-            so even that most scrambles agree, which says nothing about the error then (`nets.deviation`).
+    shares  of scrambles and strata (quantities,): about how far one path moves the mean of a part; None elsewhere. Paths
+            may be so even that most parts agree, which says little about the error then (`nets.least_deviation`).
     """
 
     paths: np.ndarray
@@ -64,10 +64,10 @@ class Batches:
         total, parts = int(self.paths.sum()), len(self.paths)
         share = self.paths / total
         mean = share @ self.means
-        if self.shares is None:
-            error = np.sqrt(((share[:, None] * (self.means - mean)) ** 2).sum(axis=0) * parts / (parts - 1))
-        else:
-            error = np.array([deviation(*each) for each in zip(self.means.T, self.shares, strict=True)]) / np.sqrt(parts)
+        error = np.sqrt(((share[:, None] * (self.means - mean)) ** 2).sum(axis=0) * parts / (parts - 1))
+        if self.shares is not None:
+            least = [least_deviation(*each) for each in zip(self.means.T, self.shares, strict=True)]
+            error = np.maximum(error, np.array(least) / np.sqrt(parts))
         quantile = float(stdtrit(parts - 1, 0.975))
         return tuple(Estimate(float(m), float(e), total, quantile) for m, e in zip(mean, error, strict=True))
 
@@ -119,7 +119,9 @@ class Sampling:
         if found.interrupted and not paths.all():
             raise KeyboardInterrupt
         price = estimates(found.paths, found.mean[:1], found.m2[:1], self.plan.strata or 1)[0]
-        return Batches(paths, sums / paths[:, None]), price
+        means = sums / paths[:, None]
+        spread = np.full(1, abs(price.value) / paths.mean()) if self.plan.strata else None
+        return Batches(paths, means[:, -1:], spread).others(means), price
 
     def _scrambles(self, program: Program, how: dict) -> tuple[Batches, Estimate]:
         scrambles = self.plan.scrambles
