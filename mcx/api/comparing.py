@@ -49,7 +49,7 @@ def methods(
         with finite(ready):
             case = Case(ready, sampling.seed, means.threads, means.notice)
             found, refused = compare(case, asked.seconds, asked.paths)
-        results.append(methods_result(ready, found, refused, sampling.seed, asked.words))
+        results.append(methods_result(ready, made.market, found, refused, sampling.seed, asked.words))
     if picture is not None:
         from mcx.report.picture import draw_methods
 

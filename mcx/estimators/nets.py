@@ -19,9 +19,9 @@ from mcx.estimators.estimate import Estimate
 from mcx.faults import RequestError
 from mcx.leaves.market_map import MarketMap
 from mcx.machine.draw_plan import MOST_POINTS, DrawPlan
-from mcx.machine.orders import bridge, components
+from mcx.machine.orders import bridge, components, early_bridge
 from mcx.machine.run import Notice, ScrambleSums, Stream, run_scrambles
-from mcx.tape.program import Leaf, LeafKind, Program
+from mcx.tape.program import Leaf, LeafKind, Program, Tape
 from mcx.tape.steps import Grid
 
 # Means of smooth payoffs over a net are skewed, with an excess kurtosis of 3 and more (a point far out decides them):
@@ -67,9 +67,15 @@ def clock(market: MarketMap, grid: Grid) -> np.ndarray:
     return market.values(leaves).reshape(len(grid.times) - 1, len(grid.assets))
 
 
-def net_draws(net: Net, order: Order, variances: np.ndarray) -> DrawPlan:
-    """The plan of draws for a net on a contract whose `clock` is given."""
-    orders = {Order.BRIDGE: bridge, Order.COMPONENTS: components}
+def may_end(observed: Tape) -> bool:
+    """Whether a contract, as the tape that reads its levels, may end on one of its dates."""
+    return any(output.kind == "end" for output in observed.outputs)
+
+
+def net_draws(net: Net, order: Order, variances: np.ndarray, early: bool = False) -> DrawPlan:
+    """The plan of draws for a net on a contract whose `clock` is given; `early`: a bridge has the early dates early, as
+    a contract that may end on them wants it."""
+    orders = {Order.BRIDGE: early_bridge if early else bridge, Order.COMPONENTS: components}
     mixed = order in orders and variances.size > 0
     return DrawPlan(net.scrambles, order=orders[order](variances) if mixed else None)
 
