@@ -50,8 +50,8 @@ def run_of(name: str, estimator: str, reduction: tuple[str, ...]) -> Found:
 @pytest.mark.parametrize("reduction", EVERY, ids=label)
 @pytest.mark.parametrize(("name", "estimator"), CASES)
 def test_against_closed_forms(name: str, estimator: str, reduction: tuple[str, ...]):
-    """Delta, vega, rho, yield and gamma by every kind of estimator, with normals alone, with the uniforms of bridges, and
-    at the moment of a hit."""
+    """Delta, vega, rho, yield and gamma by every kind of estimator, with normals alone, with the uniforms of bridges,
+    and at the moment of a hit."""
     values, form = by_name(run_of(name, estimator, reduction).values), KNOWN[name].value
     check(values["delta", "harbour", ""], slope(form, AT, "spot"), SHARP)
     check(values["vega", "harbour", ""], 0.01 * slope(form, AT, "vol"), 2 * SHARP)
@@ -76,7 +76,8 @@ def test_several_assets(reduction: tuple[str, ...]):
 
 @pytest.mark.parametrize(("reduction", "key", "less"), [
     (("antithetic",), "delta", 20), (("antithetic",), "rho", 20), (("stratified",), "delta", 2),
-    *(((order,), key, less) for order in POINTS for key, less in (("delta", 8), ("vega", 100), ("rho", 5), ("gamma", 5))),
+    *(((order,), key, less) for order in POINTS
+      for key, less in (("delta", 8), ("vega", 100), ("rho", 5), ("gamma", 5))),
 ])
 def test_variance_falls(reduction: tuple[str, ...], key: str, less: float):
     """At equal paths the variance of a smooth average's sensitivities is so many times smaller than on plain paths."""
@@ -96,7 +97,8 @@ def test_a_jump_too(order: str):
 RUNS, LEAST = 400, 4096
 SEEDS = [int(seed) for seed in np.random.default_rng(0x5BE0CD19137E2179).integers(1, 2**63, RUNS)]
 PUT = CALL.replace("spot - strike", "strike - spot").replace("strike: 95", "strike: 100")
-CALIBRATED = {"pathwise": (CALL, call), "put": (PUT, lambda **at: european("put", strike=100.0, **at)), "likelihood": (TEXT, both), "mixed": (TEXT, both), "at a hit": (HIT, rebate)}
+CALIBRATED = {"pathwise": (CALL, call), "put": (PUT, lambda **at: european("put", strike=100.0, **at)),
+              "likelihood": (TEXT, both), "mixed": (TEXT, both), "at a hit": (HIT, rebate)}
 MEASURED = [("pathwise", ("antithetic",)), ("likelihood", ("antithetic",)), ("mixed", ("antithetic",)),
             ("pathwise", ("stratified",)), ("likelihood", ("stratified",)),
             ("likelihood", ("antithetic", "stratified")),
@@ -107,8 +109,9 @@ MEASURED = [("pathwise", ("antithetic",)), ("likelihood", ("antithetic",)), ("mi
 @pytest.mark.parametrize(("case", "reduction"), MEASURED)
 def test_intervals_cover(case: str, reduction: tuple[str, ...]):
     """95 % intervals of at most 4,096 paths cover in 92 % to 98 % of 400 runs, by Student's t; all together are
-    unbiased. The rho of a single option is an indicator of one normal: paths so even count nearly the same in every part,
-    and the error is cautious. (On points the vega of a call, which has a long tail, covers 92.4 % in 2,000 runs.)"""
+    unbiased. The rho of a single option is an indicator of one normal: paths so even count nearly the same in every
+    part, and the error is cautious. (On points the vega of a call, which has a long tail, covers 92.4 % in 2,000 runs.)
+    """
     text, form = CALIBRATED[case]
     made, market = ready(text)
     drawn = Drawn(reduction, SEEDS[0], 1)
@@ -164,7 +167,8 @@ def test_threads_and_blocks_change_nothing(reduction: tuple[str, ...]):
     made, market = ready(KNOWN["barrier"].text)
     drawn = Drawn(reduction, SEED)
     main = drawn.sampling(made, 20_000)
-    program = methods(made, market, "likelihood", drawn.sampling(made, 1 << 14, Stream.PILOT)).valid[0].on(market).program
+    pilot = drawn.sampling(made, 1 << 14, Stream.PILOT)
+    program = methods(made, market, "likelihood", pilot).valid[0].on(market).program
 
     def digits(lanes: int, threads: int) -> list[bytes]:
         how = {"seed": SEED, "plan": main.plan, "lanes": lanes, "threads": threads}
@@ -191,13 +195,13 @@ def test_the_price_is_that_of_mcx_price(reduction: tuple[str, ...]):
 
 
 def test_points_that_agree_promise_nothing_exact():
-    """Nearly every scramble has as many points above a digital's strike; the funding's derivative, minus the price, has an
-    error in proportion to the price's, which knows of it."""
+    """Nearly every scramble has as many points above a digital's strike; the funding's derivative, minus the price, has
+    an error in proportion to the price's, which knows of it."""
     text = KNOWN["digital"].text + "funding: {EUR: 1%}\n"
     run_here = found(text, PATHS, SEED, ("sobol-bridge",), estimator="likelihood")
-    funding = by_name(run_here.values)["funding", "EUR", ""]
-    assert funding.mean == pytest.approx(-1e-4 * run_here.price.value, rel=1e-9)
-    assert funding.error / -funding.mean == pytest.approx(run_here.price.standard_error / run_here.price.value, rel=1e-6)
+    price, funding = run_here.price, by_name(run_here.values)["funding", "EUR", ""]
+    assert funding.mean == pytest.approx(-1e-4 * price.value, rel=1e-9)
+    assert funding.error / -funding.mean == pytest.approx(price.standard_error / price.value, rel=1e-6)
     equal = Batches(np.full(32, 64), np.full((32, 1), 0.7), np.array([0.01]))
     assert equal.estimates()[0].standard_error > 0.0
     assert Batches(np.full(32, 64), np.full((32, 1), 0.7)).estimates()[0].standard_error < 1e-15

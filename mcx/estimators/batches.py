@@ -3,8 +3,8 @@
 Paths are spread over 64 parts by their numbers, so that two runs with one seed hold the same paths in the same parts:
 what is a difference of runs, or a sum of many sums, has its error from how the parts differ (L. Schmeiser, "Batch size
 effects in the analysis of simulation output", 1982). That needs no covariances and stays right after any chain rule.
-Of scrambled points each scramble is a part: within one nothing is independent. Pairs and strata never reach over the end
-of a group of 64, so that the parts stay independent.
+Of scrambled points each scramble is a part: within one nothing is independent. Pairs and strata never reach over the
+end of a group of 64, so that the parts stay independent.
 """
 
 from __future__ import annotations
@@ -29,8 +29,8 @@ FEWEST_PATHS = BATCHES * GROUP  # so that every part has a whole group, or half 
 class Batches:
     """paths (parts,) of each part; means (parts, quantities) over the paths of each part.
 
-    shares  of scrambles and strata (quantities,): about how far one path moves the mean of a part; None elsewhere. Paths
-            may be so even that most parts agree, which says little about the error then (`nets.least_deviation`).
+    shares  of scrambles and strata (quantities,): about how far one path moves the mean of a part; None elsewhere.
+            Paths may be so even that most parts agree, which says little about the error then (`nets.least_deviation`).
     """
 
     paths: np.ndarray
@@ -50,8 +50,8 @@ class Batches:
         return Batches(self.paths, self.means[:, -1:], None if self.shares is None else self.shares[-1:])
 
     def others(self, means: np.ndarray) -> Batches:
-        """Other quantities of the same run (parts, others): their paths scatter, beside their means, as those of the first
-        quantity here do."""
+        """Other quantities of the same run (parts, others): their paths scatter, beside their means, as those of the
+        first quantity here do."""
         if self.shares is None:
             return Batches(self.paths, means)
         mean = abs(float(self.means[:, 0].mean()))
@@ -86,8 +86,8 @@ def joined(found: Sequence[Batches]) -> Batches:
 class Sampling:
     """Which paths, the same for every program that is compared with another, and how they are drawn.
 
-    each  how many paths of the contract one path of a program is: 2 for programs of pairs; `paths` counts the contract's,
-          whole pairs, strata and points
+    each  how many paths of the contract one path of a program is: 2 for programs of pairs; `paths` counts those of the
+          contract, whole pairs, strata and points
     """
 
     seed: int

@@ -109,7 +109,7 @@ class EveryMethod:
         assert found[0] == found[1]
 
     def test_blocks_change_nothing(self):
-        """However many lanes the kernel takes at once, every output's mean and squares are the same, to the last bit."""
+        """However many lanes the kernel takes at once, means and squares are the same, to the last bit."""
         ready, _ = known(self.calibrated)
         scheme = self.scheme(ready)
 
