@@ -38,7 +38,8 @@ def accrued(dated: DatedContract, state: State) -> float:
 
 
 def standing(ready: Ready) -> Iterator[str]:
-    """Shares that are owed; that a contract has ended, and what is still to come of it."""
+    """What is nearly exact or counted otherwise than the contract says; shares that are owed; that a contract has ended
+    or run out, and what is still to come of it."""
     state = ready.unrolled.state
     yield from _dividends_watched(ready)
     yield from to_deliver(ready.dated, state)
@@ -49,6 +50,9 @@ def standing(ready: Ready) -> Iterator[str]:
         if why:
             yield f"interest accrues by calendar days: {why}"
     if state.ended is None:
+        last = ready.dated.last_paid
+        if last.time < 0.0:
+            yield f"all dates of the contract have passed, the last of them on {last}: it is worth nothing any more"
         return
     due = [str(each.due) for each in state.payments if each.owed and each.amount]
     left = f"what is owed until {max(due)} is all that it is worth" if due else "nothing is owed any more"
