@@ -132,3 +132,10 @@ class DatedContract:
         days += [due for moment in self.moments for event in moment.events for pay, due in event.due.items()
                  if isinstance(pay, Deliver)]
         return max(days, key=lambda day: day.time)
+
+    @property
+    def last_paid(self) -> Day:
+        """The last day on which anything is observed or paid."""
+        due = [day for moment in self.moments for event in moment.events for day in event.due.values()]
+        due += [day for hit in self.hits for days in hit.due.values() for day in days]
+        return max([self.last, *due], key=lambda day: day.time)

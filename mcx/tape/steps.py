@@ -73,6 +73,8 @@ def expand_levels(tape: Tape, nodes: Sequence[float], makeup: Makeup = PLAIN, pi
             values.append(walk.moment(step.payload, values[step.operands[0]], step.place))
         elif step.op is Op.LOG and walk.is_later_level(tape.instructions[step.operands[0]]):
             values.append(walk.log_level(tape.instructions[step.operands[0]].payload))
+        elif step.op is Op.LT and _is_inside(tape, *step.operands):
+            values.append(walk.builder.constant(1.0))
         else:
             values.append(walk.builder.copy(step, tuple(values[k] for k in step.operands)))
     outputs = [output.at(values[output.value]) for output in tape.outputs]
@@ -80,6 +82,11 @@ def expand_levels(tape: Tape, nodes: Sequence[float], makeup: Makeup = PLAIN, pi
     normals = walk.steps * len(grid.assets) + (walk.pair is not None)
     made = drop_dead_code(walk.builder.tape(outputs, normals, walk.uniforms))
     return in_order_of_steps(made, walk.step_of) if walk.chances else made, grid
+
+
+def _is_inside(tape: Tape, part: int, end: int) -> bool:
+    """Whether it is asked if a moment comes before the end of its step: one that is drawn always does."""
+    return tape.instructions[part].op is Op.MOMENT and tape.instructions[end].payload == 1.0
 
 
 def grid_times(read: Iterable[LevelKey], watched: Iterable[LevelKey], nodes: Iterable[float]) -> list[float]:
