@@ -3,8 +3,8 @@
 Paths are spread over 64 parts by their numbers, so that two runs with one seed hold the same paths in the same parts:
 what is a difference of runs, or a sum of many sums, has its error from how the parts differ (L. Schmeiser, "Batch size
 effects in the analysis of simulation output", 1982). That needs no covariances and stays right after any chain rule.
-Of scrambled points each scramble is a part: within one nothing is independent. Pairs and strata never reach over the end
-of a group of 64, so that the parts stay independent.
+Of scrambled points each scramble is a part: within one nothing is independent. Pairs and strata never reach over the
+end of a group of 64, so that the parts stay independent.
 """
 
 from __future__ import annotations
@@ -15,7 +15,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from mcx.estimators.estimate import Estimate, estimates
-from mcx.estimators.nets import Net, deviation, net_estimates, on_net
+from mcx.estimators.nets import Net, least_deviation, net_estimates, on_net
 from mcx.faults import RequestError
 from mcx.machine.draw_plan import PLAIN, DrawPlan
 from mcx.machine.run import Notice, Stream, run
@@ -29,8 +29,8 @@ FEWEST_PATHS = BATCHES * GROUP  # so that every part has a whole group, or half 
 class Batches:
     """paths (parts,) of each part; means (parts, quantities) over the paths of each part.
 
-    shares  of scrambles (quantities,): about how far one path moves the mean of a scramble; None elsewhere. Points may be
-            so even that most scrambles agree, which says nothing about the error then (`nets.deviation`).
+    shares  of scrambles and strata (quantities,): about how far one path moves the mean of a part; None elsewhere.
+            Paths may be so even that most parts agree, which says little about the error then (`nets.least_deviation`).
     """
 
     paths: np.ndarray
@@ -50,8 +50,8 @@ class Batches:
         return Batches(self.paths, self.means[:, -1:], None if self.shares is None else self.shares[-1:])
 
     def others(self, means: np.ndarray) -> Batches:
-        """Other quantities of the same run (parts, others): their paths scatter, beside their means, as those of the first
-        quantity here do."""
+        """Other quantities of the same run (parts, others): their paths scatter, beside their means, as those of the
+        first quantity here do."""
         if self.shares is None:
             return Batches(self.paths, means)
         mean = abs(float(self.means[:, 0].mean()))
@@ -64,10 +64,10 @@ class Batches:
         total, parts = int(self.paths.sum()), len(self.paths)
         share = self.paths / total
         mean = share @ self.means
-        if self.shares is None:
-            error = np.sqrt(((share[:, None] * (self.means - mean)) ** 2).sum(axis=0) * parts / (parts - 1))
-        else:
-            error = np.array([deviation(*each) for each in zip(self.means.T, self.shares, strict=True)]) / np.sqrt(parts)
+        error = np.sqrt(((share[:, None] * (self.means - mean)) ** 2).sum(axis=0) * parts / (parts - 1))
+        if self.shares is not None:
+            least = [least_deviation(*each) for each in zip(self.means.T, self.shares, strict=True)]
+            error = np.maximum(error, np.array(least) / np.sqrt(parts))
         quantile = float(stdtrit(parts - 1, 0.975))
         return tuple(Estimate(float(m), float(e), total, quantile) for m, e in zip(mean, error, strict=True))
 
@@ -86,8 +86,8 @@ def joined(found: Sequence[Batches]) -> Batches:
 class Sampling:
     """Which paths, the same for every program that is compared with another, and how they are drawn.
 
-    each  how many paths of the contract one path of a program is: 2 for programs of pairs; `paths` counts the contract's,
-          whole pairs, strata and points
+    each  how many paths of the contract one path of a program is: 2 for programs of pairs; `paths` counts those of the
+          contract, whole pairs, strata and points
     """
 
     seed: int
@@ -119,7 +119,9 @@ class Sampling:
         if found.interrupted and not paths.all():
             raise KeyboardInterrupt
         price = estimates(found.paths, found.mean[:1], found.m2[:1], self.plan.strata or 1)[0]
-        return Batches(paths, sums / paths[:, None]), price
+        means = sums / paths[:, None]
+        spread = np.full(1, abs(price.value) / paths.mean()) if self.plan.strata else None
+        return Batches(paths, means[:, -1:], spread).others(means), price
 
     def _scrambles(self, program: Program, how: dict) -> tuple[Batches, Estimate]:
         scrambles = self.plan.scrambles

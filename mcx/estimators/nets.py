@@ -111,25 +111,30 @@ def net_estimates(sums: ScrambleSums, scrambles: int | None = None) -> tuple[Est
     quantile = float(stdtrit(count - 1, 0.975))
     spread = np.sqrt(squares.mean(axis=0) / sums.points)
     return tuple(
-        Estimate(float(means[:, k].mean()), deviation(means[:, k], spread[k] / sums.points) / math.sqrt(count),
+        Estimate(float(means[:, k].mean()), _deviation(means[:, k], spread[k] / sums.points) / math.sqrt(count),
                  count * sums.points, quantile)
         for k in range(outputs)
     )  # fmt: skip
 
 
-def deviation(means: np.ndarray, part: float) -> float:
-    """The standard deviation of a scramble's mean, from those of all; `part`: that of one path, over the points.
+def _deviation(means: np.ndarray, part: float) -> float:
+    """The standard deviation of a scramble's mean."""
+    return max(float(means.std(ddof=1)), least_deviation(means, part))
+
+
+def least_deviation(means: np.ndarray, part: float) -> float:
+    """What the standard deviation of a scramble's mean is at least, from the means of all (parts,), where most of them
+    agree; else 0. `part`: the deviation of one path, over the points.
 
     Points so even that nearly every scramble has as many on each side of a jump give means that are equal, but for a
     few: their spread alone would promise an exact result where none happened to differ. Then it is that of a
     proportion with two more of either kind (A. Agresti, B. Coull, "Approximate is better than 'exact' for interval
     estimation of binomial proportions", The American Statistician 52 (1998), 119-126), times the jump.
     """
-    found = float(means.std(ddof=1))
     middle = np.sort(means)[len(means) // 2]
     odd = int(np.sum(np.abs(means - middle) > SAME * part))
     if part == 0.0 or 2 * odd > len(means):
-        return found
+        return 0.0
     jump = max(2.0 * part, float(np.ptp(means)))
     share = (odd + 2) / (len(means) + 4)
-    return max(found, jump * math.sqrt(share * (1.0 - share)))
+    return jump * math.sqrt(share * (1.0 - share))

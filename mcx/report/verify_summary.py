@@ -16,7 +16,7 @@ from mcx.estimators.term import Solved
 from mcx.estimators.verify import BID_OFFER, INPUTS, SAMPLING, TOLERANCE, Band, Implied, Joint, Verification
 from mcx.report.cautions import assumptions, cautions, limits
 from mcx.report.results import Amount, Planned
-from mcx.report.state import standing
+from mcx.report.state import doubted, standing
 from mcx.report.summary import NO_REDUCTION
 from mcx.report.verify_results import (
     NO_EFFECT,
@@ -93,7 +93,7 @@ def verify_result(ready: Ready, market: Market, found: Verification, solve: str,
         target=target,
         planned=Planned(plan.asked, plan.paths, plan.pilot_paths, plan.target,
                         None if plan.target is None else price.half_width <= plan.target),
-        warnings=tuple(_warnings(found, market, contract)),
+        warnings=(*_warnings(found, market, contract), *doubted(dated, ready.unrolled.state, ready.market)),
         assumptions=tuple(dict.fromkeys(
             (*standing(ready), *assumptions(dated, market, ready.market), *CONVENTIONS))),
         limits=tuple(limits(dated)),
