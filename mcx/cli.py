@@ -51,7 +51,7 @@ def sampling(command: Callable) -> Callable:
     """The options that mean the same on every command that draws paths."""
     for option in (
         click.option("--reduction", default="none", metavar="A,B,…",
-                     help="Variance reduction: none, auto, or methods.  [none]"),
+                     help="Variance reduction: none or methods; auto of prices; none of verify.  [none]"),
         THREADS,
         click.option("--seed", type=int, help="Seed of the random numbers.  [1]"),
         click.option("--seconds", type=float, help="As many paths as this time allows, by a pilot run."),

@@ -46,6 +46,6 @@ def methods(
         with finite(ready):
             case = Case(ready, sampling.seed, means.threads, means.notice)
             found, refused = compare(case, asked.seconds, asked.paths)
-        results.append(methods_result(ready, found, refused, sampling.seed, asked.words))
+        results.append(methods_result(ready, made.market, found, refused, sampling.seed, asked.words))
     write_outputs("methods", files, made, dated, results, wanted)
     return results[0] if len(results) == 1 else MethodsTable(tuple(results))

@@ -64,11 +64,12 @@ def _refused(dated: Iterable[DatedContract]) -> list[Fault]:
             if each.history.sound or fault.place != each.history.place]  # what was misspelt is not missing as well
 
 
-def made_ready(made: Request, dated: Sequence[DatedContract]) -> list[Ready]:
-    """Every contract as a program on the market; raises InputError with all that the tape refuses."""
+def made_ready(made: Request, dated: Sequence[DatedContract], apart: bool = False) -> list[Ready]:
+    """Every contract as a program on the market (`apart`: see `prepare`); raises InputError with all that the tape
+    refuses."""
     from mcx.estimators.ready import prepare
 
-    found = [prepare(each, made.market) for each in dated]
+    found = [prepare(each, made.market, apart) for each in dated]
     faults = [fault for _, wrong in found for fault in wrong]
     if faults:
         raise InputError(faults)

@@ -75,8 +75,8 @@ def means_of(threads: object, progress: Progress | None = None, notice: Notice |
 
 
 def plain_only(sampling: Sampling) -> Sampling:
-    """Raises RequestError where sensitivities are asked for by methods of variance reduction."""
+    """Raises RequestError where methods of variance reduction are asked for that a verb does not take."""
     if sampling.reduction:
-        raise RequestError(f"the variance reduction of sensitivities is 'none', not "
-                           f"{','.join(sampling.reduction)!r}: their estimators choose their own controls")
+        raise RequestError(f"the variance reduction of 'verify' is 'none', not {','.join(sampling.reduction)!r}: what it "
+                           f"compares is revalued on plain paths")
     return sampling

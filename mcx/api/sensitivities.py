@@ -16,7 +16,6 @@ from mcx.api.sampling import (
     Sampling,
     check_sampling,
     means_of,
-    plain_only,
     sampling_of,
 )
 from mcx.checked.contract import Contract
@@ -54,12 +53,15 @@ def greeks(
     random numbers for comparison: spots and forwards moved by that share, vols and correlations by that much, rates,
     yields and funding by a tenth of it. `assets` limits the sensitivities, and what moves, to some assets. `spot_moves`
     asks for a ladder of moves of all spots together, `vol_moves` for a grid of both. The other arguments
-    are those of `price`; `within` is about the price. Raises InputError, RequestError, Refusal.
+    are those of `price`; `within` is about the price, `reduction` what changes how paths are drawn. Raises InputError,
+    RequestError, Refusal.
     """
     from mcx.estimators.batches import check_paths
+    from mcx.estimators.drawn import check_draws
     from mcx.estimators.wishes import wish_of
 
-    sampling = plain_only(sampling_of(paths, within, seconds, seed, reduction))
+    sampling = sampling_of(paths, within, seconds, seed, reduction)
+    check_draws(sampling.reduction)
     check_paths(sampling.precision.paths)
     wish = wish_of(estimator, bump, assets, spot_moves, vol_moves)
     means = means_of(threads, progress, notice)
@@ -101,7 +103,8 @@ def greeks_of_all(
         try:
             with finite(ready):
                 found = sensitivities(ready, made.market, wish, sampling.precision, seed=sampling.seed, pieces=number,
-                                      threads=means.threads, progress=means.progress, notice=means.notice)
+                                      reduction=sampling.reduction, threads=means.threads,
+                                      progress=means.progress, notice=means.notice)
         except KeyboardInterrupt:
             if not results:
                 raise

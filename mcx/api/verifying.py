@@ -49,7 +49,7 @@ def verify(
     Refusal.
     """
     from mcx.estimators.batches import check_paths
-    from mcx.estimators.wishes import target_of
+    from mcx.estimators.wishes import check_target, target_of
 
     sampling = plain_only(sampling_of(paths, within, seconds, seed, reduction))
     check_paths(sampling.precision.paths)
@@ -60,6 +60,8 @@ def verify(
     wanted = outputs_of(record, report, picture)
     made, dated = read_request(files, with_market=True, with_quote=True)
     check_sampling(sampling, made.contracts)
+    for each in made.contracts:
+        check_target(target, notional=each.notional is not None, title=each.title)
     count = len(made.quotes)
     check_one(wanted, count, "quote")
     results = verify_all(made, dated, [wish] * count, [sampling] * count, means)
@@ -83,7 +85,7 @@ def verify_all(
     from mcx.estimators.verify import Bench
     from mcx.report.verify_summary import verify_result
 
-    ready = {each.dated.contract.title: each for each in made_ready(made, dated)}
+    ready = {each.dated.contract.title: each for each in made_ready(made, dated, apart=True)}
     benches: dict[tuple[str, Sampling], Bench] = {}
     results = []
     for quote, wish, sampling in zip(made.quotes, wishes, samplings, strict=True):

@@ -86,7 +86,7 @@ def value(
     if ready.unrolled.bracketed:
         ready, refinement = _refined(ready, asked, seed, threads, pieces)
     case = Case(ready, seed, threads)
-    scheme = best(case) if reduction == (AUTO,) else scheme_of(case, reduction)
+    scheme = best(case, asked) if reduction == (AUTO,) else scheme_of(case, reduction)
     found = sampled(ready, scheme, asked, seed=seed, threads=threads, progress=progress, notice=notice)
     return replace(found, refinement=refinement, hedge=residuals(case) if HEDGE.name in scheme.names else ())
 
@@ -140,7 +140,7 @@ def refined(
     """The contract with steps so fine that the bounds of its price are close enough, and how many paths there is time for
     then. `prices(paths)` gives the price on each path of the pilot."""
     target = planned.target or NORMAL_95 * float(prices(PILOT).std(ddof=1)) / math.sqrt(planned.paths)
-    unrolled, program, refinement = refine(lambda number: made(ready.dated, ready.market, number), target,
+    unrolled, program, refinement = refine(lambda number: made(ready.dated, ready.market, number, ready.apart), target,
                                            seed=seed, threads=threads, pieces=pieces)
     if asked.seconds is not None:  # finer steps leave time for fewer paths
         planned = replace(planned, paths=whole_groups(max(planned.paths / refinement.cost, GROUP)))

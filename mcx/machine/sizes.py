@@ -39,7 +39,7 @@ _DEAR = {
     Form.CORRIDOR_BY_WIDTH_RRRR: 60.0,
     Form.CORRIDOR_BY_ENDS_RRRR: 60.0,
     Form.RANGE_BY_START_RRRR: 90.0,
-    Form.BRIDGE_MOMENT_RRRR: 1.9,
+    Form.BRIDGE_MOMENT_RRRR: 1.5,
     Form.FAR_RRRS: 0.4,
     Form.LOOKUP_RSS: 1.0,
 }
@@ -60,10 +60,15 @@ def nanoseconds(code: KernelCode) -> float:
 
 def cost(program: Program, plan: DrawPlan = PLAIN) -> float:
     """The cost of one path of a program, to compare programs and plans with."""
+    return nanoseconds(prepare(program)) + plan_cost(program, plan)
+
+
+def plan_cost(program: Program, plan: DrawPlan) -> float:
+    """What a path costs more by a plan of draws."""
     drawn = _NET * program.draws if plan.scrambles else 0.0
     if plan.order is not None:
         drawn += _TURN * len(plan.order.pairs) + _BEND * (program.normals if plan.order.left.size else 0)
-    return nanoseconds(prepare(program)) + drawn
+    return drawn
 
 
 def op_costs(tape: Tape) -> np.ndarray:

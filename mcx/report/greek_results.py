@@ -17,14 +17,16 @@ from mcx.report.results import Bracket, Planned, Result
 @dataclass(frozen=True, slots=True)
 class Greek(Result):
     """One sensitivity. `asset` is the asset, the pair ('harbour/quarry') or, for rho and funding, the currency; `tenor`
-    the node of the curve as written, 'all' for all its nodes at once, '' where there is one number only. `resolved`:
-    the value is at least twice its error. `note` says what is known of a bias."""
+    the node of the curve as written, 'all' for all its nodes at once, '' where there is one number only. `interval95`
+    is by Student's t for the number of independent parts that the error comes from. `resolved`: the value is at least
+    twice its error. `note` says what is known of a bias."""
 
     name: str
     asset: str
     tenor: str
     value: float
     standard_error: float
+    interval95: tuple[float, float]
     unit: str
     estimator: str
     resolved: bool

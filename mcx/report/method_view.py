@@ -22,6 +22,7 @@ def show_methods(result: MethodsResult, page: Page) -> None:
     if result.closed_form is not None:
         page.line(against_closed_form(result, factor, unit))
     for title, texts in (("what they found", found(result)), ("not applicable", refused(result)),
+                         ("assumptions", result.assumptions),
                          ("not in the model", result.limits), ("read it with care", result.cautions)):
         if texts:
             page.heading(title)

@@ -26,7 +26,7 @@ from mcx.report.results import (
     Stage,
     Width,
 )
-from mcx.report.state import accrued, owed, standing
+from mcx.report.state import accrued, doubted, owed, standing
 
 NO_REDUCTION = "none"
 
@@ -74,7 +74,8 @@ def price_result(ready: Ready, market: Market, valuation: Valuation) -> PriceRes
         clean=price.value - accrued(dated, ready.unrolled.state),
         ended=str(ready.unrolled.state.ended or ""),
         checks=Checks(martingale, tuple(Stage(e.paths, e.value, e.standard_error) for e in valuation.stages)),
-        warnings=(*warnings(valuation, ready.unrolled.tape, martingale, met), *implausible(dated, ready.market)),
+        warnings=(*warnings(valuation, ready.unrolled.tape, martingale, met), *implausible(dated, ready.market),
+                  *doubted(dated, ready.unrolled.state, ready.market)),
         assumptions=tuple(dict.fromkeys((*standing(ready), *assumptions(dated, market, ready.market)))),
         limits=tuple(limits(dated)),
         cautions=tuple(cautions(dated, bool(conditions or ends))),

@@ -16,6 +16,7 @@ from mcx.estimators.term import Solved
 from mcx.estimators.verify import BID_OFFER, INPUTS, SAMPLING, TOLERANCE, Band, Implied, Joint, Verification
 from mcx.report.cautions import assumptions, cautions, limits
 from mcx.report.results import Amount, Planned
+from mcx.report.state import doubted, standing
 from mcx.report.summary import NO_REDUCTION
 from mcx.report.verify_results import (
     NO_EFFECT,
@@ -92,8 +93,9 @@ def verify_result(ready: Ready, market: Market, found: Verification, solve: str,
         target=target,
         planned=Planned(plan.asked, plan.paths, plan.pilot_paths, plan.target,
                         None if plan.target is None else price.half_width <= plan.target),
-        warnings=tuple(_warnings(found, market, contract)),
-        assumptions=tuple(dict.fromkeys((*assumptions(dated, market, ready.market), *CONVENTIONS))),
+        warnings=(*_warnings(found, market, contract), *doubted(dated, ready.unrolled.state, ready.market)),
+        assumptions=tuple(dict.fromkeys(
+            (*standing(ready), *assumptions(dated, market, ready.market), *CONVENTIONS))),
         limits=tuple(limits(dated)),
         cautions=tuple(cautions(dated, named=False)),
         calendar_version=dated.calendar_version,
@@ -213,9 +215,9 @@ def _margin(found: Verification) -> MarginResult | None:
     margin = found.money.margin
     if margin is None:
         return None
-    return MarginResult(found.quote.issue_price, margin.amount.value, margin.amount.standard_error, margin.share.value,
-                        margin.currency.value, margin.currency.standard_error, margin.per_year.value,
-                        margin.per_year.standard_error)
+    return MarginResult(found.quote.issue_price, found.valuation.ready.dated.begun, margin.amount.value,
+                        margin.amount.standard_error, margin.share.value, margin.currency.value,
+                        margin.currency.standard_error, margin.per_year.value, margin.per_year.standard_error)
 
 
 def _solved(solved: Solved) -> Iterator[SolvedTerm]:

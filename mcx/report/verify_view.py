@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterable, Iterator
 
 from mcx.report.price_view import Scale
 from mcx.report.terminal import Page, decimals, fixed
@@ -28,9 +28,11 @@ IN_PERCENT = ("vol", "yield", "rates", "funding", "correlation")
 
 def show_verifications(table: VerifyTable, page: Page) -> None:
     """Several quotes: how they rank, then each."""
-    page.heading("on one footing, the highest first")
-    scale = Scale(table.quotes[0])
-    page.table(RANKED, rank_rows(table.ranking, scale), words=2)
+    scales = {each.contract: Scale(each) for each in table.quotes}
+    for contract, scale in scales.items():
+        of = f" of {contract}" if len(scales) > 1 else ""
+        page.heading(f"quotes{of} on one footing, the highest first, {scale.unit}")
+        page.table(RANKED, rank_rows((each for each in table.ranking if each.contract == contract), scale), words=2)
     for each in table.quotes:
         page.line()
         show_verification(each, page)
@@ -88,7 +90,7 @@ def show_verification(result: VerifyResult, page: Page) -> None:
             page.items(texts)
 
 
-def rank_rows(ranking: Sequence[Ranked], scale: Scale) -> Iterator[tuple[str, ...]]:
+def rank_rows(ranking: Iterable[Ranked], scale: Scale) -> Iterator[tuple[str, ...]]:
     """Quotes on one footing, each with the funding at which our price is the quote."""
     for each in ranking:
         funding = ("" if each.funding is None else
@@ -176,10 +178,10 @@ def _short(note: str) -> str:
 def money_rows(result: VerifyResult, scale: Scale, places: int) -> Iterator[tuple[str, str, str]]:
     """Where the value lies, with errors."""
     money, margin = result.money, result.margin
-    yield ("bond floor: certain minimum of all payments",
+    yield ("bond floor: the payments are worth no less than",
            "none" if money.bond_floor is None else scale.show(money.bond_floor, places), "")
     if money.ceiling is not None:
-        yield "certain maximum of all payments", scale.show(money.ceiling, places), ""
+        yield "the payments are worth no more than", scale.show(money.ceiling, places), ""
     for part in money.parts or money.legs:
         yield part.name, scale.show(part.price, places), scale.show(part.standard_error, places)
     yield "our price", scale.show(result.price, places), scale.show(result.standard_error, places)
@@ -188,9 +190,11 @@ def money_rows(result: VerifyResult, scale: Scale, places: int) -> Iterator[tupl
                scale.show(money.funding_standard_error, places))
     if margin is not None:
         yield "issue price", scale.show(margin.issue_price, places), ""
-        yield "day-one margin", scale.show(margin.price, places), scale.show(margin.standard_error, places)
-        yield ("  for each year of expected life", scale.show(margin.per_year, places),
-               scale.show(margin.per_year_standard_error, places))
+        name = "issue price less our price (it has begun)" if margin.begun else "day-one margin"
+        yield name, scale.show(margin.price, places), scale.show(margin.standard_error, places)
+        if not margin.begun:
+            yield ("  for each year of expected life", scale.show(margin.per_year, places),
+                   scale.show(margin.per_year_standard_error, places))
 
 
 def _money(result: VerifyResult, scale: Scale, places: int, page: Page) -> None:
@@ -198,7 +202,8 @@ def _money(result: VerifyResult, scale: Scale, places: int, page: Page) -> None:
     page.heading(MONEY)
     page.table(("", scale.unit, "error"), money_rows(result, scale, places))
     if margin is not None:
-        page.line(f"  the margin is {fixed(margin.value, 2)} {result.currency} for the whole trade, "
+        name = "difference" if margin.begun else "margin"
+        page.line(f"  the {name} is {fixed(margin.value, 2)} {result.currency} for the whole trade, "
                   f"{100.0 * margin.share:.2f} % of the issue price; expected life {result.expected_life:.2f} years")
     if 0 < len(money.payments) <= MOST_PAYMENTS:
         page.table(("payment", "decided", "paid", "least", "most"), (

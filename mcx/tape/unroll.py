@@ -54,6 +54,7 @@ class Unrolled:
 
     tape      reads normals and uniforms only: ready for `lower`
     bracketed whether outputs are the middle between two bounds, as far apart as their 'gap' outputs say
+    joined    the assets that are watched together as one, since they move as one
     observed  the same contract still reading LEVEL, LOW and HIGH: its meaning on given levels
     grid      the simulated times and assets
     levels    for each 'level' output, by its name, the asset's number and the time: its mean is the forward
@@ -68,6 +69,7 @@ class Unrolled:
     state: State
     faults: tuple[Fault, ...] = ()
     bracketed: bool = False
+    joined: frozenset[int] = frozenset()
 
 
 def unroll(
@@ -88,16 +90,17 @@ def unroll(
     faults = [*wrong, *walk.observations.unstated.values(), *missing]
     if faults:
         return _refused(faults)
-    weighted = weigh(observed, fixed_values(observed, dated.contract), everything_drawn)
+    weighted = weigh(observed, fixed_values(observed, dated.contract), everything_drawn, makeup.leaders)
     if faults := conflicts(weighted.tape):
         return _refused(faults)
     notes = _notes(walk, weighted, makeup)
     if given:
         return Unrolled(Tape((), ()), observed, Grid((0.0,), ()), {}, notes, walk.state)
     observed, levels = _with_last_levels(observed, dated.contract.assets)
-    weighted = weigh(observed, fixed_values(observed, dated.contract), everything_drawn)
+    weighted = weigh(observed, fixed_values(observed, dated.contract), everything_drawn, makeup.leaders)
     tape, grid = expand_levels(weighted.tape, nodes, makeup, pieces)
-    return Unrolled(tape, observed, grid, levels, notes, walk.state, (), bool(weighted.bracketed))
+    return Unrolled(tape, observed, grid, levels, notes, walk.state, (), bool(weighted.bracketed),
+                    frozenset(one.key.asset for one in weighted.joined))
 
 
 def _notes(walk: Walk, weighted: Weighted, makeup: Makeup) -> tuple[WatchNote, ...]:

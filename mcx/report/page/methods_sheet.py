@@ -31,7 +31,8 @@ def methods_sheet(result: MethodsResult, scene: Scene | None) -> Sheet:
     if result.closed_form is not None:
         head.append(("closed form", against_closed_form(result, factor, unit)))
     blocks.append(Facts("comparison", tuple(head)))
-    blocks += notes(("what they found", found(result)), ("not applicable", refused(result)))
+    blocks += notes(("what they found", found(result)), ("not applicable", refused(result)),
+                    ("assumptions", result.assumptions))
     blocks += evidence(scene) if scene else ()
     blocks += notes(("not in the model", result.limits), ("read it with care", result.cautions))
     return Sheet(result.contract, best, "Errors are those of sampling only.", tuple(blocks))

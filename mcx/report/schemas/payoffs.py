@@ -107,7 +107,8 @@ def _event() -> Schema:
     """One action, or a condition with what happens where it holds and where it does not."""
     actions = listed(refer("action"))
     keys = mapping({
-        "at": either(refer("at"), refer("hit")), "from": line(), "until": line(), "name": line("of the condition, in every report"),
+        "at": either(refer("at"), refer("hit")), "from": line(), "until": line(),
+        "name": line("of the condition, in every report"),
         "if": refer("formula"), "then": actions, "else": actions, **_of_an_action(),
     }, ("at",))
     return keys | {"if": {"required": ["if"]}, "then": {"required": ["then"]} | absent(*ACTIONS, *OF_DELIVER),
