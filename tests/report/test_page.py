@@ -6,6 +6,7 @@ import json
 import math
 import re
 import subprocess
+import sys
 from dataclasses import dataclass
 from html import unescape
 from html.parser import HTMLParser
@@ -297,13 +298,16 @@ def test_where_a_page_cannot_be_written(tmp_path: Path):
 # In a notebook
 
 def test_results_show_themselves():
-    """A price and sensitivities as HTML with pictures; other results leave it to their text."""
-    price, greeks = package.price(NOTE, paths=4096), package.greeks(NOTE, paths=4096)
-    for result in (price, greeks):
+    """Prices, sensitivities, verdicts and comparisons as HTML with pictures; other results leave it to their text."""
+    results = (package.price(NOTE, paths=4096), package.greeks(NOTE, paths=4096), package.verify(QUOTED, paths=4096),
+               package.methods(NOTE, paths=4096))
+    for result in results:
         shown = Tags(result._repr_html_())
         assert result.contract in " ".join(shown.texts) and "svg" in {tag for tag, _ in shown.tags}
         assert not {"html", "body", "script"} & {tag for tag, _ in shown.tags}
-    assert package.payoffs()._repr_html_() is None
+    for result in (package.payoffs(), package.readback(NOTE), package.readback(NOTE, calendar=True),
+                   results[0].legs[0]):
+        assert result._repr_html_() is None and repr(result)
     assert package.price(EXAMPLES / "autocall.yaml", paths=4096)._repr_html_().count("<article") == 2
 
 
@@ -311,11 +315,19 @@ def test_rows_of_results():
     """Legs of a price, sensitivities, contracts of a table: what is no list, as plain numbers."""
     price, greeks = package.price(NOTE, paths=4096), package.greeks(NOTE, paths=4096)
     assert price.rows() == [each.to_dict() for each in price.legs]
-    assert greeks.rows() == [each.to_dict() for each in greeks.greeks]
+    said = [each.to_dict() for each in greeks.greeks]
+    assert greeks.rows() == [{key: value for key, value in row.items() if key != "interval95"} for row in said]
     table = package.price(EXAMPLES / "autocall.yaml", paths=4096)
     assert [row["price"] for row in table.rows()] == [each.price for each in table.prices]
     assert not [value for row in table.rows() for value in row.values() if isinstance(value, list | dict)]
     assert json.dumps(table.rows())
+
+
+def test_a_frame_without_pandas(monkeypatch: pytest.MonkeyPatch):
+    """It says what is missing, and that the same rows can be had without it."""
+    monkeypatch.setitem(sys.modules, "pandas", None)
+    with pytest.raises(ImportError, match=r"needs the package 'pandas', which is not installed; rows\(\) gives"):
+        package.payoffs().to_frame()
 
 
 def test_frames():
