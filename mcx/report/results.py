@@ -399,6 +399,10 @@ class ReadbackTable(Result):
 
     readbacks: tuple[Readback, ...]
 
+    def rows(self) -> list[dict]:
+        """The dates of all contracts."""
+        return [{"contract": each.contract, **row} for each in self.readbacks for row in each.rows()]
+
 
 @dataclass(frozen=True, slots=True)
 class Definition(Result):
