@@ -12,6 +12,7 @@ from mcx.estimators.price import Valuation
 from mcx.estimators.ready import Ready
 from mcx.report.cautions import assumptions, cautions, limits, warnings
 from mcx.report.given_path import day_of
+from mcx.report.model_results import model_bracket_result
 from mcx.report.plausible import implausible
 from mcx.report.results import (
     Amount,
@@ -52,6 +53,7 @@ def price_result(ready: Ready, market: Market, valuation: Valuation) -> PriceRes
         standard_error=price.standard_error,
         interval95=price.interval95,
         bracket=_bracket(valuation),
+        model_bracket=model_bracket_result(valuation.model, ready, ready.market, price.value),
         value=price.value * contract.size,
         value_standard_error=price.standard_error * contract.size,
         paths=price.paths,

@@ -8,13 +8,17 @@ from collections.abc import Iterator, Sequence
 from mcx.checked.contract import Contract
 from mcx.checked.dealer_quote import DealerQuote
 from mcx.checked.market import Market
+from mcx.estimators.footing import reference_shifts
 from mcx.estimators.levers import SHARES, Lever, without_lever
 from mcx.estimators.ready import Ready
 from mcx.estimators.readings import ReadingNotValued
 from mcx.estimators.roots import Solution
 from mcx.estimators.term import Solved
-from mcx.estimators.verify import BID_OFFER, INPUTS, SAMPLING, TOLERANCE, Band, Implied, Joint, Verification
+from mcx.estimators.verify import BID_OFFER, INPUTS, MODEL, SAMPLING, TOLERANCE, Band, Implied, Joint, Verification
+from mcx.leaves.jacobian import moved
+from mcx.leaves.market_map import MarketMap
 from mcx.report.cautions import assumptions, cautions, limits
+from mcx.report.model_results import ModelBracketResult, model_bracket_result
 from mcx.report.results import Amount, Planned
 from mcx.report.summary import NO_REDUCTION
 from mcx.report.verify_results import (
@@ -41,7 +45,7 @@ from mcx.report.verify_results import (
 
 LARGE_Z = 4.0
 HELD_BY = {SAMPLING: "the sampling error", BID_OFFER: "half the bid-offer", INPUTS: "the 90 % input band",
-           TOLERANCE: "the stated tolerance"}
+           TOLERANCE: "the stated tolerance", MODEL: "the model bracket"}
 
 
 def verify_result(ready: Ready, market: Market, found: Verification, solve: str, target: float | None) -> VerifyResult:
@@ -71,6 +75,7 @@ def verify_result(ready: Ready, market: Market, found: Verification, solve: str,
         compared_standard_error=compared.standard_error,
         gap=Gap(gap.value, gap.standard_error, z if math.isfinite(z) else None, gap.value * contract.size),
         bands=tuple(BandLine(band.name, band.half_width, band.holds) for band in found.bands),
+        model_bracket=_model(found, ready, market),
         verdict=verdict(found.bands, gap.value, contract.currency if not percent else ""),
         leads=tuple(_leads(found)),
         explained=any(band.holds for band in found.bands),
@@ -117,8 +122,19 @@ def verdict(bands: Sequence[Band], gap: float, currency: str) -> str:
     return f"The gap of {size} is inside {_joined(inside, 'and')}{tail}."
 
 
+def _model(found: Verification, ready: Ready, market: Market) -> ModelBracketResult | None:
+    """The model bracket about our price at the spots of the quote."""
+    if found.model is None:
+        return None
+    there = moved(market, reference_shifts(found.quote, market, ready.dated.contract))
+    return model_bracket_result(found.model, ready, MarketMap.of(there, ready.dated), found.compared.value)
+
+
 def _leads(found: Verification) -> Iterator[str]:
     """What closes the gap by itself."""
+    if [band.name for band in found.bands if band.holds] == [MODEL]:
+        yield ("Explained by the model bracket alone: a dealer who prices the skew may be there, and one vol for each "
+               "tenor cannot say whether that is right.")
     if found.closing:
         yield f"Read otherwise it would be closed: {_joined(found.closing, 'or')}."
     elif found.readings.readings:
