@@ -2,10 +2,10 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 from mcx.checked.strike_vols import shown_strike, strike_of
-from mcx.dates.dated_contract import DatedContract
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.model_bracket import AtStrike, ModelBracket
 from mcx.estimators.ready import Ready
@@ -17,12 +17,14 @@ from mcx.tape.ops import Op
 @dataclass(frozen=True, slots=True)
 class StrikeAsset(Result):
     """A level that the contract refers to, as it reads it and as a strike of the asset's vols ('60% of the spot'), and
-    the vol of that strike to the last observation."""
+    the vol of that strike to the last observation; `strike` is '' where the asset has one vol. `beyond` the strikes given,
+    where the vol is that of the nearest one."""
 
     asset: str
     level: float
     strike: str
     vol: float
+    beyond: bool
 
 
 @dataclass(frozen=True, slots=True)
@@ -67,6 +69,7 @@ class ModelBracketResult(Result):
     paths: int
 
 
+ROUNDING = 1e-9
 FORWARD_SKEW = ("returns from one date to another live on forward vol and forward skew, which vols by strike of today do "
                 "not say")
 EARLY_END = ("whether it ends early hangs on the skew at dates to come, the more the longer it may live; vols by strike "
@@ -74,8 +77,6 @@ EARLY_END = ("whether it ends early hangs on the skew at dates to come, the more
 ON_THE_WAY = "it looks at levels on the way, and vols by strike say nothing of how levels of two dates go together"
 TOGETHER = "how several assets move together under skew is not said by the vols of each"
 NO_LEVEL = "the price refers to no level, so that no vol but the headline's has a claim; the skew may still matter to it"
-NOT_BETTER = ("model bracket: lognormal levels with one vol for each asset and tenor cannot do better; what lies inside it "
-              "is not decided by more paths, nor by better inputs")
 
 
 def model_bracket_result(found: ModelBracket | None, ready: Ready, here: MarketMap, price: float
@@ -87,17 +88,19 @@ def model_bracket_result(found: ModelBracket | None, ready: Ready, here: MarketM
     spot_levels = dict(zip(here.contract.assets, (here.forward(name, 0.0) for name in here.contract.assets), strict=True))
 
     def asset(name: str, level: float, vol: float) -> StrikeAsset:
-        quote = here.market.assets[name]
-        own = level * quote.spot.value / spot_levels[name]
-        shown = "" if quote.by_strike is None else shown_strike(quote.by_strike, strike_of(quote, own))
-        return StrikeAsset(name, level, shown, vol)
-
-    def headline(name: str, vol: float) -> StrikeAsset:
         vols = here.market.assets[name].by_strike
         if vols is None:
-            return StrikeAsset(name, spot_levels[name], "", vol)
-        return asset(name, vols.priced_at * spot_levels[name] / (1.0 if vols.relative else
-                                                                 here.market.assets[name].spot.value), vol)
+            return StrikeAsset(name, level, "", vol, False)
+        strike = strike_of(here.market.assets[name], level * here.market.assets[name].spot.value / spot_levels[name])
+        inside = vols.strikes[0] * (1.0 - ROUNDING) <= strike <= vols.strikes[-1] * (1.0 + ROUNDING)
+        return StrikeAsset(name, level, shown_strike(vols, strike), vol, not inside)
+
+    def headline(name: str, vol: float) -> StrikeAsset:
+        quote = here.market.assets[name]
+        if quote.by_strike is None:
+            return asset(name, spot_levels[name], vol)
+        share = quote.by_strike.priced_at / (1.0 if quote.by_strike.relative else quote.spot.value)
+        return asset(name, share * spot_levels[name], vol)
 
     def at(one: AtStrike) -> StrikePrice:
         vols = dict(one.vols)
@@ -111,10 +114,11 @@ def model_bracket_result(found: ModelBracket | None, ready: Ready, here: MarketM
 
     return ModelBracketResult(*end(low), *end(high), tuple(headline(name, vol) for name, vol in found.headline_vols),
                               tuple(map(at, found.strikes)), tuple(price + change for change in found.strip), found.exact,
-                              tuple(_indicative(found, ready.dated, ready)), found.paths)
+                              tuple(_indicative(found, ready)), found.paths)
 
 
-def _indicative(found: ModelBracket, dated: DatedContract, ready: Ready):
+def _indicative(found: ModelBracket, ready: Ready) -> Iterator[str]:
+    """Why vols by strike of today do not settle the price."""
     if not found.changes:
         yield NO_LEVEL
     if any(one.forward_start for one in found.strikes):

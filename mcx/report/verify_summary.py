@@ -17,7 +17,7 @@ from mcx.estimators.term import Solved
 from mcx.estimators.verify import BID_OFFER, INPUTS, MODEL, SAMPLING, TOLERANCE, Band, Implied, Joint, Verification
 from mcx.leaves.jacobian import moved
 from mcx.leaves.market_map import MarketMap
-from mcx.report.cautions import assumptions, cautions, limits
+from mcx.report.cautions import assumptions, cautions, limits, vol_warnings
 from mcx.report.model_results import ModelBracketResult, model_bracket_result
 from mcx.report.results import Amount, Planned
 from mcx.report.summary import NO_REDUCTION
@@ -97,9 +97,9 @@ def verify_result(ready: Ready, market: Market, found: Verification, solve: str,
         target=target,
         planned=Planned(plan.asked, plan.paths, plan.pilot_paths, plan.target,
                         None if plan.target is None else price.half_width <= plan.target),
-        warnings=tuple(_warnings(found, market, contract)),
+        warnings=(*_warnings(found, market, contract), *vol_warnings(market, ready.market)),
         assumptions=tuple(dict.fromkeys((*assumptions(dated, market, ready.market), *CONVENTIONS))),
-        limits=tuple(limits(dated)),
+        limits=tuple(limits(dated, found.model is not None)),
         cautions=tuple(cautions(dated, named=False)),
         calendar_version=dated.calendar_version,
     )

@@ -8,12 +8,13 @@ from dataclasses import dataclass
 import numpy as np
 
 from mcx.tape.ops import Op
-from mcx.tape.program import Tape
+from mcx.tape.program import LevelKey, Tape
 from mcx.tape.smooth import payments
 from mcx.tape.strikes import Strike, levels_read, values_at
 
 BESIDE = 1e-9  # relative, where a function is taken on one side of a break
 STRAIGHT = 1e-7  # relative, of a middle that lies between its ends
+TINY = 1e-300
 FIRST, LAST = 1e-4, 1e2  # of the first and of the last break, where the outer stretches are taken
 
 
@@ -44,7 +45,8 @@ def pieces(tape: Tape, known: Sequence[float | None], strikes: Sequence[Strike])
     found, whole = [], sum(map(len, by_level.values())) == len(parts)
     for (asset, time), values in by_level.items():
         only = frozenset({(asset, time, Op.LEVEL)})
-        breaks = sorted({strike.levels[0][1] for strike in strikes for turn in strike.turns if reads[turn.value] == only})
+        breaks = sorted({strike.levels[0][1] for strike in strikes
+                         if any(reads[turn.value] == only for turn in strike.turns)})
         piece = _piece(tape, known, asset, time, values, breaks)
         whole = whole and piece is not None
         if piece is not None and breaks:
@@ -57,15 +59,21 @@ def _piece(tape: Tape, known: Sequence[float | None], asset: int, time: float, v
     """The sum of some payments; None where it is not straight between the breaks."""
     if not breaks:
         return Piece(asset, time, (), (), (), ())
-    ends = [breaks[0] * FIRST, *(at * (1.0 + side * BESIDE) for at in breaks for side in (-1.0, 1.0)), breaks[-1] * LAST]
-    low, high = np.array(ends[::2]), np.array(ends[1::2])
+    beside = [at * (1.0 + side * BESIDE) for at in breaks for side in (-1.0, 1.0)]
+    ends = np.array([breaks[0] * FIRST, *beside, breaks[-1] * LAST])
+    low, high = ends[::2], ends[1::2]
     points = np.concatenate([low, 0.5 * (low + high), high])
-    every = values_at(tape, known, lambda key: points if (key.asset, key.time) == (asset, time) else np.ones_like(points))
+
+    def level(key: LevelKey) -> np.ndarray:
+        return points if (key.asset, key.time) == (asset, time) else np.ones_like(points)
+
+    every = values_at(tape, known, level)
     at_low, middle, at_high = np.sum([every[value] for value in values], axis=0).reshape(3, -1)
     size = np.max(np.abs([at_low, at_high]))
-    if not np.all(np.abs(middle - 0.5 * (at_low + at_high)) <= STRAIGHT * max(size, 1e-300)):
+    if not np.all(np.abs(middle - 0.5 * (at_low + at_high)) <= STRAIGHT * max(size, TINY)):
         return None
     slopes = (at_high - at_low) / (high - low)
-    slopes = np.where(np.abs(at_high - at_low) <= BESIDE * size, 0.0, slopes)
-    return Piece(asset, time, tuple(breaks), tuple(map(float, at_high[:-1])), tuple(map(float, at_low[1:])),
-                 tuple(map(float, slopes)))
+    here = np.array(breaks)
+    below = at_high[:-1] + slopes[:-1] * (here - high[:-1])
+    above = at_low[1:] + slopes[1:] * (here - low[1:])
+    return Piece(asset, time, tuple(breaks), tuple(below.tolist()), tuple(above.tolist()), tuple(slopes.tolist()))
