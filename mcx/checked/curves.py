@@ -158,8 +158,8 @@ class MarketReader:
                 self.faults.append(expected("a vol", value, f"vols by strike go under {STRIKES_WRITTEN}"))
                 continue
             if form == "vol" and label.text in ("strikes", "priced_at"):
-                self.faults.append(Fault(label.place, "vols by strike are for assets; a rate of exchange has one vol for "
-                                                      "each tenor"))
+                text = "vols by strike are for assets; a rate of exchange has one vol for each tenor"
+                self.faults.append(Fault(label.place, text))
                 continue
             time, quoted = self.time(label), self.quoted(value, FORMS[form])
             if time is None or quoted is None:
@@ -220,7 +220,7 @@ class MarketReader:
             return None
 
     def _check_variance(self, points: list[Point], where: str) -> None:
-        """Total variance must not fall from one node to the next; `where` (" of the strike '80%'") is for the message."""
+        """Total variance must not fall from one node to the next; `where` is for the message."""
         for before, point in zip(points, points[1:], strict=False):
             held, total = (one.quoted.value**2 * one.time for one in (before, point))
             if total < held * (1 - 1e-12):

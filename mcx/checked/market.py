@@ -111,12 +111,11 @@ class FxMarket:
 
 @dataclass(frozen=True, slots=True)
 class StrikeVols:
-    """Black vols by strike: a curve for each strike, in rising order, all with the same tenors. Strikes are shares of the
-    spot (`relative`) or levels in the asset's currency; so is `priced_at`, the strike whose vols price a contract.
-    `labels` are the strikes as written."""
+    """Black vols by strike: a curve for each strike, in rising order, all with the same tenors. Strikes are shares of
+    the spot (`relative`) or levels in the asset's currency; so is `priced_at`, the strike whose vols price a contract.
+    """
 
     strikes: tuple[float, ...]
-    labels: tuple[str, ...]
     curves: tuple[Curve, ...]
     relative: bool
     priced_at: float

@@ -50,9 +50,9 @@ def read_asset(reader: MarketReader, name: Scalar, node: Node) -> AssetMarket | 
     if len(faults) > before:
         return None
     return AssetMarket(
-        name.text, spot, currency, priced_curve(by_strike) if by_strike else curves["vol"], name.place, dividend_yield=curves.get("yield"),
-        forwards=curves.get("forwards"), dividends=dividends, blend=blend, total_return=kind == "total return",
-        decrement=decrement, quanto=quanto, by_strike=by_strike)
+        name.text, spot, currency, priced_curve(by_strike) if by_strike else curves["vol"], name.place,
+        dividend_yield=curves.get("yield"), forwards=curves.get("forwards"), dividends=dividends, blend=blend,
+        total_return=kind == "total return", decrement=decrement, quanto=quanto, by_strike=by_strike)
 
 
 def read_fx(reader: MarketReader, name: Scalar, node: Node) -> FxMarket | None:

@@ -1,7 +1,8 @@
 """Vols by strike of a market document, and the curve of vols at any strike.
 
-At a tenor vols are linear in strike between the strikes given and flat beyond them; at a strike total variance is linear
-in time, as for any curve of vols. So no total variance falls in time between two strikes where it falls at neither.
+At a tenor vols are linear in strike between the strikes given and flat beyond them; at a strike total variance is
+linear in time, as for any curve of vols. So no total variance falls in time between two strikes where it falls at
+neither.
 """
 
 from __future__ import annotations
@@ -23,8 +24,8 @@ UNITS = "a strike as '80%' of the spot or as a level such as '51.5'"
 
 
 def read_strike_vols(reader: MarketReader, node: Mapping, spot: Quoted | None) -> StrikeVols | None:
-    """`{strikes: {80%: ..., 100%: ...}, priced_at: 100%}`: strikes in percent of the spot, or as levels, all of them the
-    same way. `priced_at`: the strike whose vols price a contract, or 'spot'. None where anything is wrong."""
+    """`{strikes: {80%: ..., 100%: ...}, priced_at: 100%}`: strikes in percent of the spot, or as levels, all of them
+    the same way. `priced_at`: the strike whose vols price a contract, or 'spot'. None where anything is wrong."""
     faults, before = reader.faults, len(reader.faults)
     check_keys(node, (), ("strikes", "priced_at"), faults, "the vols")
     inner = node.get("strikes")
@@ -37,16 +38,16 @@ def read_strike_vols(reader: MarketReader, node: Mapping, spot: Quoted | None) -
     relative = known[0][1] if known else True
     for (key, _), found in zip(inner.entries, strikes, strict=True):
         if found is not None and found[1] != relative:
-            faults.append(Fault(key.place, f"'{key}' is {_unit(found[1])}, the strikes before it are {_unit(relative)}; "
-                                           "keep to one of the two"))
+            faults.append(Fault(key.place, f"'{key}' is {_unit(found[1])}, the strikes before it are "
+                                           f"{_unit(relative)}; keep to one of the two"))
     _check_order(inner, strikes, faults)
     curves = [_curve(reader, key, value) for key, value in inner.entries]
     _check_tenors(inner, curves, faults)
     priced_at = _priced_at(node.get("priced_at"), spot, relative, faults) if "priced_at" in node else None
     if len(faults) > before:
         return None
-    return StrikeVols(tuple(value for value, _ in known), tuple(key.text for key, _ in inner.entries), tuple(curves),
-                      relative, priced_at, node.key("strikes").place)
+    return StrikeVols(tuple(value for value, _ in known), tuple(curves), relative, priced_at,
+                      node.key("strikes").place)
 
 
 def curve_at(vols: StrikeVols, strike: float) -> Curve:
@@ -106,7 +107,7 @@ def _strike(node: Node, spot: Quoted | None, faults: list[Fault]) -> tuple[float
 
 
 def _unit(relative: bool) -> str:
-    return "in percent of the spot" if relative else "a level"
+    return "in percent of the spot" if relative else "as a level"
 
 
 def _check_order(inner: Mapping, strikes: list[tuple[float, bool] | None], faults: list[Fault]) -> None:
@@ -119,8 +120,7 @@ def _check_order(inner: Mapping, strikes: list[tuple[float, bool] | None], fault
 def _curve(reader: MarketReader, strike: Scalar, node: Node) -> Curve | None:
     """The vols of one strike: a flat number, or numbers by tenor."""
     if isinstance(node, Mapping) and "value" not in node:
-        points: Curve | None = reader.curve_of(node, "vol", f" of the strike '{strike}'")
-        return points
+        return reader.curve_of(node, "vol", f" of the strike '{strike}'")
     return reader.curve(node, "vol")
 
 
@@ -129,8 +129,8 @@ def _check_tenors(inner: Mapping, curves: list[Curve | None], faults: list[Fault
     read = [(key, curve) for (key, _), curve in zip(inner.entries, curves, strict=True) if curve is not None]
     for key, curve in read[1:]:
         if _tenors(curve.nodes) != _tenors(read[0][1].nodes):
-            faults.append(Fault(curve.place, f"the strike '{key}' has the tenors {_listed(curve)}, the strike "
-                                             f"'{read[0][0]}' has {_listed(read[0][1])}; give each strike the same"))
+            faults.append(Fault(curve.place, f"the strike '{key}' has {_listed(curve)}, the strike '{read[0][0]}' has "
+                                             f"{_listed(read[0][1])}; give each strike the same tenors"))
 
 
 def _tenors(nodes: tuple[Point, ...]) -> list[str]:
@@ -138,7 +138,7 @@ def _tenors(nodes: tuple[Point, ...]) -> list[str]:
 
 
 def _listed(curve: Curve) -> str:
-    return ", ".join(f"'{label}'" for label in _tenors(curve.nodes)) if not curve.flat else "of a flat number: none"
+    return "one vol for all" if curve.flat else ", ".join(f"'{label}'" for label in _tenors(curve.nodes))
 
 
 def _priced_at(node: Node, spot: Quoted | None, relative: bool, faults: list[Fault]) -> float | None:
@@ -149,6 +149,6 @@ def _priced_at(node: Node, spot: Quoted | None, relative: bool, faults: list[Fau
         return None
     found = _strike(node, spot, faults)
     if found is not None and found[1] != relative:
-        faults.append(expected(f"{'a share of the spot' if relative else 'a level'}, as the strikes are, or 'spot'", node))
+        faults.append(expected(f"a strike {_unit(relative)}, as the strikes are, or 'spot'", node))
         return None
     return found and found[0]

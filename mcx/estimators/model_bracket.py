@@ -1,10 +1,10 @@
 """How far one vol for each asset and tenor lets a price be where vols differ by strike: the model bracket.
 
-Lognormal levels have one vol; a contract that refers to several levels has a price for the vol of each. All are taken on
-the same paths, and so are two first-order answers to what one vol leaves out:
+Lognormal levels have one vol; a contract that refers to several levels has a price for the vol of each. All are taken
+on the same paths. Two answers to what one vol leaves out join them:
 
-- a jump at the last date is a digital, and under vols by strike it is worth Black's term plus its vega times the slope
-  of vol in strike (`tape/jump_put.py`), on each side of a strike where vols are quoted;
+- a jump at the last date is a digital, and under vols by strike it is worth Black's term plus the vega of its put times
+  the slope of vol in strike (`tape/jump_put.py`), to first order, on each side of a strike where vols are quoted;
 - payments that depend on one level of one date are sums of puts and digitals, each at the vol of its own strike: where
   the whole price is such, that needs no model at all. It lies beyond every single vol where a contract buys one strike
   and sells another, as a capped gain does.
@@ -153,8 +153,8 @@ def _strip(market: Market, ready: Ready, here: MarketMap, strip: Sequence[Piece]
 
 
 def worth(piece: Piece, under: LevelLaw, side: float) -> float:
-    """The mean of a function of a level that is straight between its breaks: a sum of puts and digitals, of a call beyond
-    the last break; `side` as for the law's chances."""
+    """The mean of a function of a level that is straight between its breaks: a line, puts and digitals; `side` as for
+    the law's chances."""
     return math.fsum(_terms(piece, under, side))
 
 

@@ -69,7 +69,7 @@ class LevelLaw:
 
 def law(market: Market, contract: Contract, here: MarketMap, name: str, time: float, smile: bool) -> LevelLaw:
     """The law of an asset's level by its vols by strike or, without `smile`, by the one vol that prices the contract.
-    `here` is the map of the market; where the vol of a rate of exchange moves a forward, that is the one of the market."""
+    `here` is the map of the market, whose forward serves every strike, also at a fixed rate of exchange."""
     last = here.last
 
     def variance(strike: float) -> float:
@@ -82,8 +82,8 @@ def law(market: Market, contract: Contract, here: MarketMap, name: str, time: fl
 
 
 def butterflies(market: Market, contract: Contract, here: MarketMap) -> Iterator[str]:
-    """Where puts at the strikes given fit no law: three neighbours of which the middle one is worth too much, or a spread
-    of two worth less than nothing or more than its width."""
+    """Where puts at the strikes given fit no law: three neighbours of which the middle one is worth too much, or a
+    spread of two worth less than nothing or more than its width."""
     for name in contract.assets:
         asset = market.assets[name]
         vols = asset.by_strike

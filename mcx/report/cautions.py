@@ -127,8 +127,8 @@ def limits(dated: DatedContract, model_bracket: bool = False) -> Iterator[str]:
     yield ("risk-neutral lognormal levels with one vol for each asset and tenor: no skew, no stochastic vol, no jumps; "
            "rates, yields and dividends are known in advance")
     if model_bracket:
-        yield ("the model bracket is how far vols by strike leave the price open; one vol for each asset and tenor cannot "
-               "do better: neither more paths nor better inputs decide what lies inside it")
+        yield ("the model bracket is how far vols by strike leave the price open; one vol for each asset and tenor "
+               "cannot do better: neither more paths nor better inputs decide what lies inside it")
     elif _turns(settled):
         yield ("under skew the levels where this contract turns have vols of their own: price it with their vol too, "
                "and read the two as a bracket")

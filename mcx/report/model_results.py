@@ -17,8 +17,8 @@ from mcx.tape.ops import Op
 @dataclass(frozen=True, slots=True)
 class StrikeAsset(Result):
     """A level that the contract refers to, as it reads it and as a strike of the asset's vols ('60% of the spot'), and
-    the vol of that strike to the last observation; `strike` is '' where the asset has one vol. `beyond` the strikes given,
-    where the vol is that of the nearest one."""
+    the vol of that strike to the last observation; `strike` is '' where the asset has one vol. `beyond` the strikes
+    given, where the vol is that of the nearest one."""
 
     asset: str
     level: float
@@ -29,8 +29,8 @@ class StrikeAsset(Result):
 
 @dataclass(frozen=True, slots=True)
 class StrikePrice(Result):
-    """The price at the vol of one level (of each asset). `skewed` holds it with the jump at that level corrected for the
-    slope of vol in strike below and above it, empty where the price does not jump there at the last observation.
+    """The price at the vol of one level (of each asset). `skewed` holds it with the jump at that level corrected for
+    the slope of vol in strike below and above it, empty where the price does not jump there at the last observation.
     `difference_standard_error` is that of the price less the headline price, on the same paths, and likewise for
     `skewed`. `forward_start`: the level is a share of the spot of a later date, shown as one of today's."""
 
@@ -70,13 +70,13 @@ class ModelBracketResult(Result):
 
 
 ROUNDING = 1e-9
-FORWARD_SKEW = ("returns from one date to another live on forward vol and forward skew, which vols by strike of today do "
-                "not say")
-EARLY_END = ("whether it ends early hangs on the skew at dates to come, the more the longer it may live; vols by strike "
-             "of today do not say that")
+FORWARD_SKEW = ("returns from one date to another live on forward vol and forward skew, which vols by strike of today "
+                "do not say")
+EARLY_END = ("whether it ends early hangs on the skew at dates to come, the more the longer it may live; vols by "
+             "strike of today do not say that")
 ON_THE_WAY = "it looks at levels on the way, and vols by strike say nothing of how levels of two dates go together"
 TOGETHER = "how several assets move together under skew is not said by the vols of each"
-NO_LEVEL = "the price refers to no level, so that no vol but the headline's has a claim; the skew may still matter to it"
+NO_LEVEL = "the price refers to no level that has a vol of its own; the skew may matter to it all the same"
 
 
 def model_bracket_result(found: ModelBracket | None, ready: Ready, here: MarketMap, price: float
@@ -85,7 +85,7 @@ def model_bracket_result(found: ModelBracket | None, ready: Ready, here: MarketM
     if found is None:
         return None
     low, high = found.low, found.high
-    spot_levels = dict(zip(here.contract.assets, (here.forward(name, 0.0) for name in here.contract.assets), strict=True))
+    spot_levels = {name: here.forward(name, 0.0) for name in here.contract.assets}
 
     def asset(name: str, level: float, vol: float) -> StrikeAsset:
         vols = here.market.assets[name].by_strike
@@ -113,8 +113,8 @@ def model_bracket_result(found: ModelBracket | None, ready: Ready, here: MarketM
         return (None, None) if estimate is None else (price + estimate.value, estimate.standard_error)
 
     return ModelBracketResult(*end(low), *end(high), tuple(headline(name, vol) for name, vol in found.headline_vols),
-                              tuple(map(at, found.strikes)), tuple(price + change for change in found.strip), found.exact,
-                              tuple(_indicative(found, ready)), found.paths)
+                              tuple(map(at, found.strikes)), tuple(price + change for change in found.strip),
+                              found.exact, tuple(_indicative(found, ready)), found.paths)
 
 
 def _indicative(found: ModelBracket, ready: Ready) -> Iterator[str]:

@@ -18,8 +18,8 @@ def model_line(found: ModelBracketResult, scale: Scale) -> str:
     places = scale.places(max(found.lower_standard_error, found.upper_standard_error))
     low, high = scale.show(found.lower, places), scale.show(found.upper, places)
     tail = "; indicative only" if found.indicative else ""
-    return (f"{low} to {high}{scale.sign} by the vols of the levels that the contract refers to{tail}; the headline takes "
-            f"{_headline(found)}")
+    return (f"{low} to {high}{scale.sign} by the vols of the levels that the contract refers to{tail}; the headline "
+            f"takes {_headline(found)}")
 
 
 def show_model(found: ModelBracketResult, scale: Scale, page: Page) -> None:
@@ -50,7 +50,8 @@ def _rows(found: ModelBracketResult, scale: Scale, places: int) -> Iterator[tupl
 
 def _sides(prices: Sequence[float], errors: Sequence[float], scale: Scale, places: int) -> list[tuple[str, str, str]]:
     """A price with the slope of vol on each side of a strike; once where both show the same."""
-    shown = [(scale.show(price, places), scale.show(error, places)) for price, error in zip(prices, errors, strict=True)]
+    shown = [(scale.show(price, places), scale.show(error, places))
+             for price, error in zip(prices, errors, strict=True)]
     if shown and shown[0][0] == shown[-1][0]:
         return [("", *shown[0])]
     return [(side, *each) for side, each in zip((" below", " above"), shown, strict=True)] if shown else []

@@ -77,7 +77,7 @@ def verify_result(ready: Ready, market: Market, found: Verification, solve: str,
         bands=tuple(BandLine(band.name, band.half_width, band.holds) for band in found.bands),
         model_bracket=_model(found, ready, market),
         verdict=verdict(found.bands, gap.value, contract.currency if not percent else ""),
-        leads=tuple(_leads(found)),
+        leads=tuple(_leads(found, contract.currency if not percent else "")),
         explained=any(band.holds for band in found.bands),
         inputs=tuple(InputEffect(each.lever.name, each.lever.subject, min(filter(None, each.lever.widths)),
                                  each.change.value, each.change.standard_error, each.note) for each in found.effects),
@@ -113,13 +113,17 @@ CONVENTIONS = (
 
 def verdict(bands: Sequence[Band], gap: float, currency: str) -> str:
     """One sentence: which bands hold the gap, which do not, or that none does."""
-    size = f"{gap:+,.6g} {currency} per unit" if currency else f"{1e4 * gap:+,.1f} bp"
+    size = _size(gap, currency)
     inside = [HELD_BY[band.name] for band in bands if band.holds]
     outside = [HELD_BY[band.name] for band in bands if band.holds is False]
     if not inside:
         return f"Nothing that was stated holds the gap of {size}: it is outside {_joined(outside, 'and')}."
     tail = f", outside {_joined(outside, 'and')}" if outside else ""
     return f"The gap of {size} is inside {_joined(inside, 'and')}{tail}."
+
+
+def _size(gap: float, currency: str) -> str:
+    return f"{gap:+,.6g} {currency} per unit" if currency else f"{1e4 * gap:+,.1f} bp"
 
 
 def _model(found: Verification, ready: Ready, market: Market) -> ModelBracketResult | None:
@@ -130,11 +134,16 @@ def _model(found: Verification, ready: Ready, market: Market) -> ModelBracketRes
     return model_bracket_result(found.model, ready, MarketMap.of(there, ready.dated), found.compared.value)
 
 
-def _leads(found: Verification) -> Iterator[str]:
-    """What closes the gap by itself."""
+def _leads(found: Verification, currency: str) -> Iterator[str]:
+    """What closes the gap by itself; `currency` '' where prices are in percent."""
     if [band.name for band in found.bands if band.holds] == [MODEL]:
         yield ("Explained by the model bracket alone: a dealer who prices the skew may be there, and one vol for each "
                "tenor cannot say whether that is right.")
+    if found.model is not None and found.model.exact:
+        left = sorted(found.gap.value - change for change in found.model.strip)
+        nearest = min(left, key=abs)
+        yield (f"With each strike at its own vol the contract needs no model of levels; of the gap that leaves "
+               f"{_size(nearest, currency)}.")
     if found.closing:
         yield f"Read otherwise it would be closed: {_joined(found.closing, 'or')}."
     elif found.readings.readings:

@@ -2,8 +2,8 @@
 
 A price that jumps by J where a level falls below K holds J digitals there. A digital is the derivative in strike of the
 put, so under vols by strike it is that of a put whose vol goes along with its strike: Black's term plus the vega times
-the slope of vol. J may hang on all that happened before, and the level may be that of several assets (the worst of them):
-the put then pays J times what the compared value lacks of the level, in shares of it.
+the slope of vol. J may hang on all that happened before, and the level may be that of several assets (the worst of
+them): the put then pays J times what the compared value lacks of the level, in shares of it.
 """
 
 from __future__ import annotations
@@ -26,8 +26,8 @@ LANES, SEED, SPREAD = 256, 20261201, 0.35  # trial paths on which a jump is look
 
 def jump_put(tape: Tape, known: Sequence[float | None], strike: Strike, last: float, spots: Sequence[float]
              ) -> Tape | None:
-    """The put as a tape that reads levels, its price the one output; None where the price does not jump at the strike on
-    the last date, or not because a level of that date alone is compared with it. `tape` has the price alone."""
+    """The put as a tape that reads levels, its price the one output; None where the price does not jump at the strike
+    on the last date, or not because a level of that date alone is compared with it. `tape` has the price alone."""
     reads = levels_read(tape, known)
     levels = dict(strike.levels)
     turn = next((turn for turn in strike.turns if not strike.forward_start and turn.time == last and turn.alone

@@ -20,8 +20,8 @@ FIRST, LAST = 1e-4, 1e2  # of the first and of the last break, where the outer s
 
 @dataclass(frozen=True, slots=True)
 class Piece:
-    """A discounted amount as a function of an asset's level at a time. `breaks` in rising order; `below` and `above` its
-    values on both sides of each (they differ at a jump); `slopes` (breaks + 1,) between them."""
+    """A discounted amount as a function of an asset's level at a time. `breaks` in rising order; `below` and `above`
+    its values on both sides of each (they differ at a jump); `slopes` (breaks + 1,) between them."""
 
     asset: int
     time: float

@@ -1,10 +1,10 @@
 """Which levels a price refers to: strikes, barriers, call levels, caps, found on the contract's tape.
 
-A price turns where two values of the tape are compared, or the smaller or larger of them is taken. All levels that such a
-place reads are moved together from their references, and where the two values cross, the price refers to these levels:
-60 % of each initial level for `worst(spot / initial) < 60%`, for a basket that share of each of its assets. A place that
-compares levels of one date with those of another, or their return with a number, does not turn so; there the earlier
-levels stay at the spot and the later move, and what is found is a share of a spot to come, in terms of today's.
+A price turns where two values of the tape are compared, or the smaller or larger of them is taken. All levels that such
+a place reads are moved together from their references, and where the two values cross, the price refers to these
+levels: 60 % of each initial level for `worst(spot / initial) < 60%`, for a basket that share of each of its assets. A
+place that compares levels of one date with those of another, or their return with a number, does not turn so; there the
+earlier levels stay at the spot and the later move, and what is found is a share of a spot to come, in terms of today's.
 
 Crossings are found by number, not by form, so that whatever a formula does to levels is followed.
 """
@@ -40,8 +40,8 @@ ASIDE = 1.07
 
 @dataclass(frozen=True, slots=True)
 class Turn:
-    """A value of the tape that compares; `time` is the last of the levels that it reads, `alone` whether it reads levels
-    of no other time."""
+    """A value of the tape that compares; `time` is the last of the levels that it reads, `alone` whether it reads
+    levels of no other time."""
 
     value: int
     time: float
@@ -67,8 +67,8 @@ def price_alone(tape: Tape) -> Tape:
 
 
 def strikes(tape: Tape, known: Sequence[float | None], spots: Sequence[float]) -> tuple[Strike, ...]:
-    """The levels that a price refers to, each once, in rising order. `tape` reads levels; `known`: by value, what is the
-    same on every path; `spots` (assets,): today's levels in the unit that the contract reads."""
+    """The levels that a price refers to, each once, in rising order. `tape` reads levels; `known`: by value, what is
+    the same on every path; `spots` (assets,): today's levels in the unit that the contract reads."""
     references = _references(tape, known, spots)
     reads, returns = levels_read(tape, known), _returns(tape, known)
     found: dict[tuple, list[Turn]] = {}
@@ -226,7 +226,8 @@ def _narrowed(tape: Tape, known: Sequence[float | None], found: Sequence[tuple[i
 
     def narrow(at: np.ndarray) -> None:
         values = values_at(tape, known, lambda key: moved(key, at))
-        gap = np.array([np.broadcast_to(difference(tape, number, values), at.shape)[k] for k, number in enumerate(numbers)])
+        gap = np.array([np.broadcast_to(difference(tape, number, values), at.shape)[k]
+                        for k, number in enumerate(numbers)])
         same = np.sign(gap) == side
         low[same & (at > low)] = at[same & (at > low)]
         high[~same & (at < high)] = at[~same & (at < high)]

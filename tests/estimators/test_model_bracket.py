@@ -123,7 +123,8 @@ FLAT = {
     "digital at a strike given": contract("digital", f"side: put, strike: 90, {DIGITAL}", size="units: 1"),
     "watched": contract("barrier", "side: put, direction: down, knock: in, strike: 100, barrier: 80, "
                         "watched: {continuous: [0y, 1y]}, rebate: 0, expiry: 1y", size="units: 1"),
-    "forward start": contract("forward_start", "side: call, pays: money, strike: 105%, strike_date: 6m, expiry: 1y", size="units: 1"),
+    "forward start": contract("forward_start", "side: call, pays: money, strike: 105%, strike_date: 6m, expiry: 1y",
+                              size="units: 1"),
 }
 
 
@@ -264,7 +265,7 @@ def worst_of(lantern: str, correlation: int = 40) -> str:
 
 
 def test_a_worst_of_takes_the_level_of_each_asset():
-    """Each asset at the vol of its own level; the price there is that of a market with these two vols, to the last bit."""
+    """Each asset at the vol of its own level; the price there is that of a market with these two vols."""
     text = worst_of("{strikes: {60%: 30%, 100%: 22%}, priced_at: 100%}")
     found, price = bracket_of(text)
     first = found.strikes[0]
@@ -312,14 +313,14 @@ def test_one_asset_may_have_one_vol():
     "currency: USD, quanto: {fx_vol: 9%, fx_correlation: -30%, fx: EUR per USD}",
 ])
 def test_cash_dividends_and_fixed_rates_of_exchange(more):
-    """Where the level that decides is the last one observed, both leave a lognormal level: the strip is a put at the vol
-    of its strike on the forward of the market."""
+    """Where the level that decides is the last one observed, both leave a lognormal level: the strip is a put at the
+    vol of its strike on the forward of the market."""
     text = TITLE.format(payoff="european", terms="{side: put, strike: 85, expiry: 1y}", size="units: 1",
                         assets="[harbour]")
     if "quanto" in more:
         text = text.replace("assets: [harbour]", "assets: [harbour]\nconversion: {harbour: quanto}")
     vols = by_strike(SMILES["linear skew"])
-    quoted = market(vols).replace("yield:", f"{more}, yield:").replace("rates: {EUR: 3.0%}", "rates: {EUR: 3%, USD: 4%}")
+    quoted = market(vols).replace("yield:", f"{more}, yield:").replace("{EUR: 3.0%}", "{EUR: 3%, USD: 4%}")
     found = ready_of(text + quoted)
     bracket = model_bracket(found, found.market.market, Sampling(SEED, PATHS))
     forward = found.market.forward("harbour", 1.0)
