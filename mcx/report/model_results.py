@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 from dataclasses import dataclass
 
+from mcx.checked.market import Market
 from mcx.checked.strike_vols import shown_strike, strike_of
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.model_bracket import AtStrike, ModelBracket
@@ -76,6 +77,7 @@ EARLY_END = ("whether it ends early hangs on the skew at dates to come, the more
              "strike of today do not say that")
 ON_THE_WAY = "it looks at levels on the way, and vols by strike say nothing of how levels of two dates go together"
 TOGETHER = "how several assets move together under skew is not said by the vols of each"
+NO_WIDTH = "every level has the vol of the headline: the bracket has no width, and that is no certainty"
 NO_LEVEL = "the price refers to no level that has a vol of its own; the skew may matter to it all the same"
 
 
@@ -131,5 +133,13 @@ def _indicative(found: ModelBracket, ready: Ready) -> Iterator[str]:
         yield EARLY_END
     elif len({step.payload.time for step in read}) > 1 or any(step.op is not Op.LEVEL for step in read):
         yield ON_THE_WAY
+    if found.changes and all(change.value == 0.0 for change in found.changes) and not _flat(ready.market.market):
+        yield NO_WIDTH
     if len({step.payload.asset for step in read}) > 1:
         yield TOGETHER
+
+
+def _flat(market: Market) -> bool:
+    """Whether every vol is the same at each strike."""
+    by_strike = [asset.by_strike for asset in market.assets.values() if asset.by_strike is not None]
+    return all(len({tuple(node.quoted.value for node in curve.nodes) for curve in vols.curves}) == 1 for vols in by_strike)

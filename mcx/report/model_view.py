@@ -11,22 +11,19 @@ from mcx.report.terminal import Page
 MOST_ASSETS = 4  # named in a row; more are in --json
 
 
-def model_line(found: ModelBracketResult, scale: Scale) -> str:
+def model_line(found: ModelBracketResult, scale: Scale, places: int) -> str:
     """'102.43 to 104.40 %; the headline takes the vol of 100% of the spot': one line beside a price."""
     if found.lower is None:
         return f"none: the price refers to no level; the headline takes {_headline(found)}"
-    places = scale.places(max(found.lower_standard_error, found.upper_standard_error))
     low, high = scale.show(found.lower, places), scale.show(found.upper, places)
     tail = "; indicative only" if found.indicative else ""
     return (f"{low} to {high}{scale.sign} by the vols of the levels that the contract refers to{tail}; the headline "
             f"takes {_headline(found)}")
 
 
-def show_model(found: ModelBracketResult, scale: Scale, page: Page) -> None:
+def show_model(found: ModelBracketResult, scale: Scale, places: int, page: Page) -> None:
     """The price at the vol of each level, what skew does at jumps, and how far the bracket may be trusted."""
     page.heading("model bracket (apart from sampling and inputs)")
-    error = max((one.difference_standard_error for one in found.strikes), default=0.0)
-    places = scale.places(error)
     page.table(("vols of", "vol", scale.unit, "error"), _rows(found, scale, places), words=1)
     if found.strikes:
         page.line(f"  errors are those of the difference from the headline price, on the same {found.paths:,} paths")
@@ -58,12 +55,14 @@ def _sides(prices: Sequence[float], errors: Sequence[float], scale: Scale, place
 
 
 def _level(one: StrikePrice) -> str:
-    shown = ", ".join(_strike(each) for each in one.assets[:MOST_ASSETS])
+    shown = ", ".join(_strike(each, one.forward_start) for each in one.assets[:MOST_ASSETS])
     more = f" and {len(one.assets) - MOST_ASSETS} more" if len(one.assets) > MOST_ASSETS else ""
-    return f"{shown}{more}{' (of a spot to come)' if one.forward_start else ''}"
+    return f"{shown}{more}"
 
 
-def _strike(each: StrikeAsset) -> str:
+def _strike(each: StrikeAsset, forward_start: bool) -> str:
+    if forward_start:
+        return f"{each.asset} as of {each.strike or f'{each.level:,.8g}'}, of one to come"
     if not each.strike:
         return f"{each.asset} {each.level:,.8g} (one vol)"
     beyond = ", beyond the strikes given" if each.beyond else ""
