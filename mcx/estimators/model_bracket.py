@@ -85,9 +85,11 @@ def model_bracket(ready: Ready, market: Market, sampling: Sampling) -> ModelBrac
     observed any more. Errors are those of differences on the first 2^17 of the paths. Raises KeyboardInterrupt after an
     interruption."""
     contract = ready.dated.contract
+    if not any(market.assets[name].by_strike for name in contract.assets):
+        return None
     tape = price_alone(ready.unrolled.observed)
     end = max((step.payload.time for step in tape.instructions if step.op in READ), default=None)
-    if end is None or not any(market.assets[name].by_strike for name in contract.assets):
+    if end is None:
         return None
     here = MarketMap.of(market, ready.dated)
     spots = [here.forward(name, 0.0) for name in contract.assets]

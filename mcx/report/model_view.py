@@ -46,10 +46,10 @@ def _rows(found: ModelBracketResult, scale: Scale, places: int) -> Iterator[tupl
 
 
 def _sides(prices: Sequence[float], errors: Sequence[float], scale: Scale, places: int) -> list[tuple[str, str, str]]:
-    """A price with the slope of vol on each side of a strike; once where both show the same."""
+    """A price with the slope of vol on each side of a strike; once where both are the same within the error."""
     shown = [(scale.show(price, places), scale.show(error, places))
              for price, error in zip(prices, errors, strict=True)]
-    if shown and shown[0][0] == shown[-1][0]:
+    if shown and (shown[0][0] == shown[-1][0] or abs(prices[0] - prices[-1]) <= errors[0]):
         return [("", *shown[0])]
     return [(side, *each) for side, each in zip((" below", " above"), shown, strict=True)] if shown else []
 
