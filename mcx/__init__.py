@@ -1,8 +1,8 @@
 """Independent values, with their errors, for structured notes and exotic options declared in YAML.
 
-`price`, `greeks`, `verify`, `methods`, `readback`, `payoffs`, `definition`, `blank` and `replay` are the verbs of the
-command line as functions; see `mcx.api` for their arguments and `mcx.report.results` for what they return. Importing the
-package loads nothing heavy: each name is fetched when it is first used.
+`price`, `greeks`, `verify`, `methods`, `readback`, `payoffs`, `definition`, `blank`, `schema` and `replay` are the
+verbs of the command line as functions; see `mcx.api` for their arguments and `mcx.report.results` for what they return.
+Importing the package loads nothing heavy: each name is fetched when it is first used.
 """
 
 from __future__ import annotations
@@ -11,7 +11,7 @@ from importlib import import_module
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
-    from mcx.api import blank, definition, greeks, methods, payoffs, price, readback, replay, verify
+    from mcx.api import blank, definition, greeks, methods, payoffs, price, readback, replay, schema, verify
     from mcx.faults import Fault, InputError, Place, Refusal, RequestError
     from mcx.report.greek_results import GreeksResult, GreeksTable
     from mcx.report.method_results import MethodsResult, MethodsTable
@@ -29,7 +29,8 @@ if TYPE_CHECKING:
     __version__: str
 
 HOMES = {
-    "mcx.api": ("blank", "definition", "greeks", "methods", "payoffs", "price", "readback", "replay", "verify"),
+    "mcx.api": ("blank", "definition", "greeks", "methods", "payoffs", "price", "readback", "replay", "schema",
+                "verify"),
     "mcx.faults": ("Fault", "InputError", "Place", "Refusal", "RequestError"),
     "mcx.report.greek_results": ("GreeksResult", "GreeksTable"),
     "mcx.report.method_results": ("MethodsResult", "MethodsTable"),
@@ -63,6 +64,7 @@ __all__ = [
     "price",
     "readback",
     "replay",
+    "schema",
     "verify",
 ]
 

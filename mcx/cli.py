@@ -26,7 +26,7 @@ NO, WRONG, INTERRUPTED = 1, 2, 130
 MOVES = "-5%,-4%,-3%,-2%,-1%,0,1%,2%,3%,4%,5%"  # of a ladder or grid, where none are named
 
 EXPONENT = re.compile(r"[+-]?[0-9]+(\.[0-9]*)?[eE][+-]?[0-9]{1,2}")
-
+REPORT = click.option("--report", type=click.Path(), help="Write a page of HTML to this file.")
 FILES = click.argument("files", nargs=-1, required=True, metavar="FILES…")
 AS_JSON = click.option("--json", "as_json", is_flag=True, help="One JSON object, full precision.")
 THREADS = click.option("--threads", type=int, help="Processors to use; changes no digit.  [all]")
@@ -50,7 +50,7 @@ def sampling(command: Callable) -> Callable:
     """The options that mean the same on every command that draws paths."""
     for option in (
         click.option("--reduction", default="none", metavar="A,B,…",
-                     help="Variance reduction: none, auto, or methods.  [none]"),
+                     help="Variance reduction: none or methods; auto of prices; none of verify.  [none]"),
         THREADS,
         click.option("--seed", type=int, help="Seed of the random numbers.  [1]"),
         click.option("--seconds", type=float, help="As many paths as this time allows, by a pilot run."),
@@ -108,6 +108,7 @@ def cli() -> None:
 @sampling
 @AS_JSON
 @click.option("--record", type=click.Path(), help="Write a valuation record to this new file.")
+@REPORT
 def price(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
     """What is it worth? Value, error, legs, probabilities and checks."""
     from mcx import api
@@ -130,6 +131,7 @@ def price(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
 @sampling
 @AS_JSON
 @click.option("--record", type=click.Path(), help="Write a valuation record to this new file.")
+@REPORT
 def greeks(files: tuple[str, ...], as_json: bool, ladder: bool, grid: bool, spot_moves: str | None,
            vol_moves: str | None, **wishes: object) -> None:
     """How does it move? Delta, gamma, vega, rho, theta and more, each with its error and its estimator."""
@@ -169,6 +171,7 @@ def methods(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
 @sampling
 @AS_JSON
 @click.option("--record", type=click.Path(), help="Write a valuation record to this new file.")
+@REPORT
 def verify(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
     """Can the dealer's quote be right? What would explain the gap?"""
     from mcx import api
@@ -196,14 +199,19 @@ def readback(files: tuple[str, ...], path: str | None, calendar: bool, as_json: 
 @click.argument("name", required=False)
 @click.option("--blank", is_flag=True, help="Contract, market and quote to fill in.")
 @click.option("--assets", metavar="A,B", help="The assets to write into them.")
+@click.option("--schema", is_flag=True, help="JSON schema for editors: contracts on NAME, or on any definition.")
 @AS_JSON
-def payoffs(name: str | None, blank: bool, assets: str | None, as_json: bool) -> None:
+def payoffs(name: str | None, blank: bool, assets: str | None, schema: bool, as_json: bool) -> None:
     """Which definitions are there? NAME prints one in full."""
     from mcx import api
 
     if blank != (assets is not None) or (blank and name is None):
         raise click.UsageError("a blank needs all three: 'mcx payoffs NAME --blank --assets a,b'")
-    if blank:
+    if blank and schema:
+        raise click.UsageError("'--blank' and '--schema' are two answers; ask for one at a time")
+    if schema:
+        click.echo(json.dumps(api.schema(name), indent=2, ensure_ascii=False))
+    elif blank:
         text = api.blank(name, [asset.strip() for asset in assets.split(",")])
         click.echo(json.dumps({"blank": text}, indent=2, ensure_ascii=False) if as_json else text, nl=as_json)
     elif name:

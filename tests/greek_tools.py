@@ -22,10 +22,12 @@ def ready(text: str, number: int = 0) -> tuple[Ready, object]:
     return made, request.market
 
 
-def found(text: str, paths: int, seed: int, **wish: object) -> Found:
+def found(text: str, paths: int, seed: int, reduction: tuple[str, ...] = (), threads: int | None = None,
+          **wish: object) -> Found:
     """Everything that `mcx greeks` finds about the only contract of a text."""
     made, market = ready(text)
-    return sensitivities(made, market, Wish(**wish), Precision(paths=paths), seed=seed)
+    return sensitivities(made, market, Wish(**wish), Precision(paths=paths), seed=seed, reduction=reduction,
+                         threads=threads)
 
 
 def by_name(values) -> dict[Key, Estimate]:
@@ -34,9 +36,9 @@ def by_name(values) -> dict[Key, Estimate]:
             Estimate(value.estimate.value, value.estimate.standard_error) for value in values}
 
 
-def greeks(text: str, paths: int, seed: int, **wish: object) -> dict[Key, Estimate]:
+def greeks(text: str, paths: int, seed: int, reduction: tuple[str, ...] = (), **wish: object) -> dict[Key, Estimate]:
     """The sensitivities of the only contract of a text."""
-    return by_name(found(text, paths, seed, **wish).values)
+    return by_name(found(text, paths, seed, reduction, **wish).values)
 
 
 def slope(value: Callable[..., float], at: Mapping[str, float], by: str, step: float = 1e-2) -> float:

@@ -154,6 +154,30 @@ def test_a_composite_level_needs_the_rate_of_its_day(tmp_path: Path):
     assert sorted(found) == pytest.approx([38.25 / 1.25, 44 / 1.25, 48.5 / 1.25])
 
 
+@pytest.mark.parametrize(("day", "inside", "said"), [
+    ("2027-09-01", ("lantern", "USD per EUR"), ""),
+    ("2027-09-01", ("lantern",), "that day's fixing of lantern is left out, for that of USD per EUR is not in"),
+    ("2027-09-01", ("USD per EUR",), "that day's fixing of USD per EUR is left out, for that of lantern is not in"),
+    ("2027-09-01", (), ""),
+    ("2027-07-01", ("lantern",),
+     "fixings of lantern on days without one of USD per EUR are left out, the first of them of 2027-07-01")])
+def test_one_fixing_alone_of_a_composite_level_is_said_to_be_left_out(day: str, inside: tuple[str, ...], said: str):
+    """It is half of a level: on the valuation date the market's spots count, earlier nothing reads it."""
+    levels = {key: level for key, level in LEVELS.items() if key[1] < "2027-09"}
+    levels |= {("USD per EUR", when): 1.25 for when in ("2027-03-01", "2027-06-01")} | {
+        (name, day): {"lantern": 44.0, "USD per EUR": 1.25}[name] for name in inside}
+    text = (WORST_OF.replace("payoff:", "conversion: {lantern: composite}\npayoff:")
+            + market("2027-09-01").replace("lantern: {spot: 47, currency: EUR", "lantern: {spot: 50, currency: USD")
+            .replace("rates: {EUR: 2%}", "rates: {EUR: 2%, USD: 3%}\nfx: {USD per EUR: {spot: 1.1, vol: 8%}}").replace(
+                "50%}\n", "50%, harbour/USD per EUR: 0%, lantern/USD per EUR: 0%}\n") + fixings(levels))
+    found = prepare(text)
+    left_out = [each for each in found.dated.assumptions if "left out" in each]
+    assert len(left_out) == bool(said) and all(said in each for each in left_out)
+    fixed = day == "2027-09-01" and len(inside) == 2
+    assert any("that day's fixing of lantern and the market's spot of harbour" in each
+               for each in found.dated.assumptions) == fixed
+
+
 # What happened
 
 TOUCH = """contract: touch
@@ -367,6 +391,53 @@ def test_clean_and_dirty(tmp_path: Path):
     assert (today.accrued, [(each.leg, each.amount) for each in today.owed]) == (0.0, [("coupon", 0.03)])
 
 
+def accrued(folder: Path, today: str, start: str, rule: str, count: str) -> float:
+    """Interest of a rate of 12 % that has accrued in a contract from `start` with coupons by a rule."""
+    text = COUPONS.replace("NAME", "reverse_convertible").replace("DENOM", "").replace("TODAY", today)
+    text = text.replace("30/360", count).replace("start: 2026-12-01", f"start: {start}")
+    text = text.replace("{from: 2027-03-01, until: 2027-12-01, every: 3 months}", rule)
+    text = text.replace("final: 2027-11-24", "final: coupon_dates.last")
+    return package.price(written(folder, text), paths=64).accrued
+
+
+@pytest.mark.parametrize(("today", "start", "rule", "part"), [
+    # 2003-11-01 to 2004-05-01 are 182 days whatever rolls: 2003-11-01 is a Saturday, 2004-05-01 too
+    ("2004-02-10", "2003-05-01", "{from: 2003-11-01, until: 2004-11-01, every: 6 months}", 0.5 * 101 / 182),
+    ("2003-11-03", "2003-05-01", "{from: 2003-11-01, until: 2004-11-01, every: 6 months}", 0.5 * 2 / 182),
+    ("2004-05-02", "2003-05-01", "{from: 2003-11-01, until: 2004-11-01, every: 6 months}", 0.5),
+    # a short first period of an annual coupon, and a long first one of a coupon every six months
+    ("1999-05-01", "1999-02-01", "{from: 1999-07-01, until: 2000-07-01, every: 1 year}", 89 / 365),
+    ("2003-03-01", "2002-08-15", "{from: 2003-07-15, until: 2004-01-15, every: 6 months}",
+     0.5 * (153 / 184 + 45 / 181)),
+])
+def test_interest_accrues_by_regular_periods(tmp_path: Path, today: str, start: str, rule: str, part: float):
+    """Actual/Actual (ICMA), Rule 251: days over those of the regular period. The periods are those of the examples of
+    ISDA (1998), EMU and Market Conventions: Recent Developments (from memory), the days counted by hand."""
+    assert accrued(tmp_path, today, start, rule, "Actual/Actual (ICMA)") == pytest.approx(0.12 * part, rel=1e-14)
+
+
+def test_interest_of_the_last_period_keeps_the_end_of_february(tmp_path: Path):
+    """30E/360 (ISDA): 178 of 178 days on the termination date, and 152 of them a month before the end of it."""
+    rule = "[2006-08-31, 2007-02-28]"
+    found = [accrued(tmp_path, today, "2006-02-28", rule, "30E/360 (ISDA)") for today in ("2006-12-15", "2007-02-02")]
+    assert found == pytest.approx([0.12 * 105 / 360, 0.12 * 152 / 360], rel=1e-14)
+
+
+@pytest.mark.parametrize(("change", "said"), [
+    (("day_count: 30/360\n", ""), "the contract states no day count"),
+    (("30/360", "Actual/Actual (ICMA)"), "the coupon dates follow no rule of months")])
+def test_interest_by_calendar_days_is_said(tmp_path: Path, change: tuple[str, str], said: str):
+    """Where nothing else can count: 61 of the 92 days from 2027-06-01 to 2027-09-01."""
+    text = ("payoff: fixed\nterms: {seen: {type: dates}}\nevents:\n  - {at: seen, pay: 3%, part: coupon}\n---\n"
+            + COUPONS.replace("DENOM", "").replace("TODAY", "2027-08-01").replace("NAME", "fixed").replace(*change))
+    start, end = text.index("terms: {initial"), text.index("---\nmarket")
+    text = text[:start] + "terms: {seen: [2027-06-01, 2027-09-01, 2027-11-01]}\n" + text[end:]
+    result = package.price(written(tmp_path, text), paths=64)
+    assert result.accrued == pytest.approx(0.03 * 61 / 92, rel=1e-14)
+    (why,) = (each for each in result.assumptions if each.startswith("interest accrues by calendar days: "))
+    assert said in why
+
+
 def test_a_conditional_coupon_does_not_accrue(tmp_path: Path):
     """Only what is paid whatever happens is interest."""
     assert package.price(written(tmp_path, WORST_OF + market() + fixings(LEVELS)), paths=64).accrued == 0.0
@@ -402,6 +473,19 @@ def test_a_delivery_that_is_certain(tmp_path: Path):
     truth = (2 * 92 * exp(0.01 * later) + 0.5 * 90) / 250 * exp(-0.03 * later)
     assert abs(leg.price - truth) < 4 * leg.standard_error
     assert any("owed on 2027-12-01: 2 shares of harbour for each note" in each for each in result.assumptions)
+
+
+def test_a_number_of_shares_that_is_still_to_come(tmp_path: Path):
+    """The result says that fractions are then delivered as well; once the initial level is fixed they are cash."""
+    text = COUPONS.replace("NAME", "share_reverse_convertible").replace("DENOM", "denomination: 250\n").replace(
+        "initial: 100", "initial: {average: [2026-12-01, 2026-12-02]}")
+    fixed = "fixings: {harbour: {2026-12-01: 98, 2026-12-02: 102}}\n"
+    said = ("how many shares 'shares' delivers is not fixed yet: fractions are taken to be delivered as well, not paid in "
+            "cash")
+    before = package.price(written(tmp_path, text.replace("TODAY", "2026-12-01")), paths=1 << 14)
+    assert said in before.assumptions
+    after = package.price(written(tmp_path, text.replace("TODAY", "2026-12-03") + fixed), paths=256)
+    assert not any("how many shares" in each for each in after.assumptions)
 
 
 def test_delivery_asks_for_the_size_of_a_note(tmp_path: Path):

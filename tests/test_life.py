@@ -225,10 +225,15 @@ def test_a_called_note_is_worth_what_is_owed_and_then_nothing():
         assert str(found.unrolled.state.ended) == "2027-06-01"
 
 
-def test_after_its_last_payment_a_contract_is_worth_nothing():
-    """All is fixed, all is paid."""
-    found = prepare(TAIL + market(date(2028, 1, 10), 77.0, HISTORY))
-    assert found.price(64, SEED).mean == 0.0
+@pytest.mark.parametrize(("today", "said"), [(date(2027, 12, 8), False), (date(2027, 12, 9), True)])
+def test_after_its_last_payment_a_contract_is_worth_nothing(tmp_path, today: date, said: bool):
+    """All is fixed, all is paid, and the result says so; on the day of the payment it is still owed."""
+    file = tmp_path / "case.yaml"
+    file.write_text(TAIL + market(today, 77.0, HISTORY))
+    found = mcx.price(file, paths=64)
+    assert (found.price == 0.0) == said
+    assert ("all dates of the contract have passed, the last of them on 2027-12-08: it is worth nothing any more"
+            in found.assumptions) == said
 
 
 # Sensitivities under fixings

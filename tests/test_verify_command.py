@@ -143,7 +143,66 @@ def test_several_quotes_are_ranked(tmp_path: Path):
     for each in found["ranking"]:  # what is paid after a year is discounted with the spread
         assert each["funding"] == pytest.approx(0.005 - log(each["mid"] / price), abs=1e-6)
     assert outcome.code == 1
-    assert "on one footing, the highest first" in mcx("verify", quoted(tmp_path, one + other, market), *ASKED).out
+    assert "quotes on one footing, the highest first" in mcx("verify", quoted(tmp_path, one + other, market), *ASKED).out
+
+
+def test_quotes_of_several_contracts_are_ranked_apart(tmp_path: Path):
+    """One table for each contract, under its title."""
+    two = CALL + "---\n" + CALL.replace("contract: Call", "contract: Put").replace("side: call", "side: put") + MARKET
+    out = mcx("verify", written(tmp_path, two + QUOTE + "for: Put\n" + QUOTE + "for: Call\n"), *ASKED).out
+    tables = [out.index(f"quotes of {title} on one footing") for title in ("Put", "Call")]
+    assert tables == sorted(tables)
+
+
+def test_the_target_of_a_note_has_a_unit():
+    """12.5 would be 1,250 % of the notional."""
+    refused(mcx("verify", NOTE, *ASKED, "--solve", "coupon", "--target", "12.5"), "write the target in % or bp")
+
+
+BEGUN = """\
+contract: Harbour knock-out
+payoff: barrier
+currency: EUR
+units: 1
+assets: [harbour]
+start: 2026-03-02
+settlement: 2 business days
+calendar: {holidays: ECB, roll: following}
+terms:
+  side: call
+  direction: down
+  knock: out
+  strike: 100
+  barrier: 80
+  watched: {continuous: [2026-03-02, expiry]}
+  expiry: 2026-12-11
+happened: {touched: {2026-12-01: false}}
+---
+market: 2026-12-01
+assets:
+  harbour: {spot: 104, currency: EUR, yield: 0%, vol: 20%}
+rates: {EUR: 2%}
+---
+quote: Saltmarsh desk
+at: 2026-12-01
+side: mid
+unit: per unit
+price: 4.4
+issue_price: 8
+accrual: dirty
+commitment: firm
+"""
+
+
+def test_a_contract_that_has_begun(tmp_path: Path):
+    """What an issue price holds beyond today's value was not charged on the first day; a reading that watches on dates
+    does not choke on what was stated of the watch, but asks for the fixings that it needs."""
+    out = mcx("verify", written(tmp_path, BEGUN), *ASKED).out
+    assert "issue price less our price (it has begun)" in out and "day-one margin" not in out
+    found = mcx("verify", written(tmp_path, BEGUN), *ASKED, "--json").json
+    readings = {each["reading"]: each for each in found["readings"]}
+    assert readings["barrier at expiry"]["price"] is not None
+    assert "needs a fixing of 'harbour' on 2026-03-02" in readings["barrier at each close"]["note"]
 
 
 def test_a_record_reproduces(tmp_path: Path):
@@ -195,6 +254,7 @@ def test_wrong_quotes(tmp_path: Path, changes: dict, said: str):
     (("--solve", "strik"), "states no numeric term 'strik'; did you mean 'strike'?"),
     (("--target", "9"), "name the term with 'solve'"),
     (("--solve", "strike", "--target", "much"), "'target' is a price such as '99.5%'"),
+    (("--solve", "strike", "--target", "9%"), "'Call' has no notional to take a share of"),
     (("--paths", "4095"), "at least 4,096 paths"),
 ])
 def test_wrong_requests(tmp_path: Path, options: tuple, said: str):

@@ -26,6 +26,7 @@ MOST_VOL = 3.0
 MOST_DISCOUNT = 1.5
 STRIKES_WRITTEN = "'{strikes: {80%: {1y: 21%}, 100%: {1y: 18%}}, priced_at: 100%}'"
 COMPOUNDING = ("continuous", "annual", "simple")
+UNSAID = RateConvention()  # how rates are meant about which nothing is said
 FLAT_DAY_COUNTS = ("Actual/365 (Fixed)", "Actual/360")  # those by which a year is always as long
 
 Number = Callable[[Node], float | Fault]
@@ -102,6 +103,12 @@ class MarketReader:
             return self._factors(node, factors)
         if "zero_rates" in node:
             return self._zero_rates(node, factors)
+        beside = [key for key in ("compounding", "day_count") if key in node] if factors else []
+        if beside:
+            text = (f"'{beside[0]}' stands beside the rates, not among them: '{{zero_rates: {{1y: 2.1%}}, compounding: "
+                    "annual}'")
+            self.faults.append(Fault(node.key(beside[0]).place, text))
+            return None
         return self.curve_of(node, form)
 
     def _factors(self, node: Mapping, factors: bool) -> Curve | None:
@@ -126,7 +133,7 @@ class MarketReader:
             return None
         before = len(self.faults)
         compounding = one_of(node.get("compounding"), COMPOUNDING, self.faults, "a compounding")
-        day_count = read(node, "day_count", day_count_name, self.faults) or RateConvention.day_count
+        day_count = read(node, "day_count", day_count_name, self.faults) or UNSAID.day_count
         if "day_count" in node:
             self._check_curve_day_count(node.get("day_count"), day_count)
         curve = self.curve(node.get("zero_rates"), "zero")
@@ -144,8 +151,8 @@ class MarketReader:
         return replace(curve, convention=RateConvention(compounding, day_count, self.valuation))
 
     def _check_curve_day_count(self, node: Node, name: str) -> None:
-        if self.textbook and name != RateConvention.day_count:
-            self.faults.append(expected(f"{RateConvention.day_count}", node, "a textbook market has no dates"))
+        if self.textbook and name != UNSAID.day_count:
+            self.faults.append(expected(UNSAID.day_count, node, "a textbook market has no dates"))
         elif name == "Actual/Actual (ICMA)":
             self.faults.append(expected("a day count of curves", node, f"{name} needs coupon periods"))
 

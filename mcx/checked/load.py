@@ -160,7 +160,8 @@ def _tables(markets: list[Document], given: list[Document]) -> tuple[list[Docume
     if wanted and not found:
         found, wrong = read_documents([wanted])
         place = markets[0].body.get("fixings").place
-        faults += [Fault(place, f"the fixings in '{wanted}': {fault.text}") for fault in wrong]
+        faults += wrong if Path(wanted).is_file() else [
+            Fault(place, f"the fixings in '{wanted}': {fault.text}") for fault in wrong]
     return found, faults
 
 

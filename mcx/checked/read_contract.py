@@ -288,7 +288,7 @@ def _check_keys(body: Mapping, dated: bool, payoff: Payoff, faults: list[Fault])
             if key in body:
                 text = f"'{key}' belongs to contracts with calendar dates; this one uses times"
                 faults.append(Fault(body.key(key).place, text))
-    elif "day_count" not in body and _uses_period(payoff) and not _is_meant(body, "day_count"):
+    elif "day_count" not in body and uses_period(payoff) and not _is_meant(body, "day_count"):
         text = f"'day_count' is missing in the contract: '{payoff.name}' pays by 'period'"
         faults.append(Fault(body.place, text))
 
@@ -298,7 +298,8 @@ def _is_meant(body: Mapping, *keys: str) -> bool:
     return any(did_you_mean(key, keys) for key in body.keys() if key not in KEYS)
 
 
-def _uses_period(payoff: Payoff) -> bool:
+def uses_period(payoff: Payoff) -> bool:
+    """Whether anything in the definition goes by year fractions, so that a day count must be stated."""
     actions = [action for event in payoff.events for action in (*event.then, *event.otherwise)]
     formulas: list[Formula | None] = [let.formula for let in payoff.lets]
     formulas += [formula for running in payoff.running for formula in (running.formula, running.start)]

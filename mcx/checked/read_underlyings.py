@@ -78,7 +78,8 @@ def _check_what_is_given_up(node: Mapping, total_return: bool, faults: list[Faul
             faults.append(Fault(node.key("decrement").place, "a decrement is taken from a total-return index; write "
                                                              "'underlying: total return' as well"))
         elif not set(GIVEN_UP) & set(node.keys()):
-            faults.append(Fault(node.place, f"'yield' or 'forwards' is missing in {what}; write 'yield: 0%' for none"))
+            text = f"'yield', 'dividends' or 'forwards' is missing in {what}; write 'yield: 0%' for none"
+            faults.append(Fault(node.place, text))
         faults += [Fault(node.key("forwards").place, f"{what} has both '{other}' and 'forwards'; keep one")
                    for other in ("yield", "dividends") if other in node and "forwards" in node]
     if "dividend_blend" in node and "dividends" not in node:

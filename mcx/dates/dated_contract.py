@@ -7,11 +7,13 @@ the tests walks along. `DatedContract` knows nothing of the market but the valua
 from __future__ import annotations
 
 import datetime
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 
 from mcx.checked.contract import Contract, LevelFixing
 from mcx.checked.payoff import Deliver, Event, Pay, Running
 from mcx.dates.day import Day
+from mcx.dates.day_counts import Regular
 from mcx.dates.history import NO_HISTORY, History
 
 __all__ = ["Day", "DatedContract", "DatedEvent", "Moment", "Occasion", "Update", "Watch"]
@@ -95,7 +97,8 @@ class DatedContract:
 
     `schedules` gives the days of every date, dates and (dated) watch term. `calendar_version` names the holiday
     package and its version, '' where no holidays were asked for. `assumptions` are sentences to print with any value,
-    `warnings` are about what looks like a slip. `history` is what is known of its past.
+    `warnings` are about what looks like a slip. `history` is what is known of its past. `regular` gives the regular
+    periods of schedules by a rule, as `TermDays.regular`, where the contract counts days by them.
     """
 
     contract: Contract
@@ -109,6 +112,7 @@ class DatedContract:
     hits: tuple[DatedHit, ...] = ()
     warnings: tuple[str, ...] = ()
     history: History = NO_HISTORY
+    regular: Mapping[str, tuple[Regular, int]] = field(default_factory=dict)
 
     @property
     def levels_fixed(self) -> tuple[tuple[str, Day], ...]:
@@ -128,3 +132,10 @@ class DatedContract:
         days += [due for moment in self.moments for event in moment.events for pay, due in event.due.items()
                  if isinstance(pay, Deliver)]
         return max(days, key=lambda day: day.time)
+
+    @property
+    def last_paid(self) -> Day:
+        """The last day on which anything is observed or paid."""
+        due = [day for moment in self.moments for event in moment.events for day in event.due.values()]
+        due += [day for hit in self.hits for days in hit.due.values() for day in days]
+        return max([self.last, *due], key=lambda day: day.time)

@@ -17,8 +17,8 @@ from mcx.checked.payoff import At, Continuous, Event, Pay, Payoff, Running
 from mcx.checked.term_values import DATED_TYPES, NUMERIC
 from mcx.dates.business_days import NotCovered, good_days
 from mcx.dates.dated_contract import Day, DatedContract, DatedEvent, DatedHit, Moment, Occasion, Update, Watch
-from mcx.dates.day_counts import ICMA, actual_365_fixed, year_fraction
-from mcx.dates.history import NO_HISTORY, History, history_of, said
+from mcx.dates.day_counts import ICMA, Regular, actual_365_fixed, year_fraction
+from mcx.dates.history import NO_HISTORY, History, history_of, said, said_of_today
 from mcx.dates.readable import readings
 from mcx.dates.rules import TermDays, part_of
 from mcx.faults import Fault, Place
@@ -27,13 +27,13 @@ WATCHABLE = ("lowest", "highest", "ever", "always")
 
 
 def date_contract(
-    contract: Contract, valuation: datetime.date | None, history: History = NO_HISTORY
+    contract: Contract, valuation: datetime.date | None, history: History = NO_HISTORY, otherwise: bool = False
 ) -> tuple[DatedContract | None, list[Fault]]:
     """The contract with every date known, and the faults that only dates can show.
 
     Times are years from `valuation`; without one, from the contract's start. Optional date terms that are not
     stated narrow nothing, and nothing happens at them. A contract at fault gives no dated one, but the faults of the
-    dates that can be read in it.
+    dates that can be read in it. Of a contract read `otherwise`, statements that only its own reading needs are none.
     """
     good, faults = good_days(contract.calendar) if contract.calendar else (None, [])
     paying, more = good_days(contract.payment_calendar) if contract.payment_calendar else (good, [])
@@ -48,7 +48,7 @@ def date_contract(
     schedules = {name: days for name, days in found.items() if days}
     unread = frozenset(name for name in dated_terms if name in contract.at_fault or found.get(name) == ())
     start = Day(0.0) if contract.textbook else terms.day(contract.start.date)
-    dated, faults = _Dating(contract, valuation, schedules, unread, start, terms, history).dated()
+    dated, faults = _Dating(contract, valuation, schedules, unread, start, terms, history).dated(otherwise)
     faults += terms.faults + _wrong_lengths(contract, schedules)
     return (None if faults or contract.at_fault else dated), sorted(set(faults))
 
@@ -119,7 +119,7 @@ class _Dating:
         self.hits: list[DatedHit] = []
         self.unwatched = False  # whether a watch is at fault, so that its running value has no date
 
-    def dated(self) -> tuple[DatedContract | None, list[Fault]]:
+    def dated(self, otherwise: bool) -> tuple[DatedContract | None, list[Fault]]:
         self._refuse_dates_before_start()
         for running in self.payoff.running:
             self._observe(running)
@@ -128,7 +128,8 @@ class _Dating:
         days = sorted({*self.updates, *self.events}, key=lambda day: day.time)
         if not self._can_be_read():
             return None, self.faults
-        self._refuse_needless_statements(days)
+        if not otherwise:
+            self._refuse_needless_statements(days)
         if not days and not self.hits and not self.faults:
             self._fault(self.contract.place, "nothing is ever observed or paid: no event has a date")
         dated = DatedContract(
@@ -139,7 +140,7 @@ class _Dating:
             assumptions=(*self.contract.assumptions, *dict.fromkeys(self.assumptions),
                          *said(self.contract, self.history)),
             warnings=tuple(dict.fromkeys(self.warnings)), history=replace(self.history, eve=self._eve()),
-            hits=tuple(self.hits))
+            hits=tuple(self.hits), regular=self._regular())
         live, idle, faults = readings(dated)
         faults += self.faults
         return (None if faults else _only(dated, live, idle)), faults
@@ -321,6 +322,12 @@ class _Dating:
             return regular.months / 12
         return year_fraction(ICMA, self.contract.start.date, regular.step(skipped), regular=regular)
 
+    def _regular(self) -> dict[str, tuple[Regular, int]]:
+        """The regular periods of every schedule that has them, where days are counted by them."""
+        if self.contract.day_count != ICMA:
+            return {}
+        return {name: found for name in self.schedules if (found := self.terms.regular(name))}
+
     def _due(self, pay: Pay, occasion: Occasion) -> Day:
         """When an amount is paid."""
         day = occasion.day
@@ -374,28 +381,12 @@ def _only(dated: DatedContract, live: frozenset[str], idle: frozenset[Place]) ->
         if updates or events:
             moments.append(replace(moment, updates=updates, events=events))
     watches = tuple(watch for watch in dated.watches if watch.running.name in live)
-    today = [_today(dated) for moment in moments if moment.day.date and moment.day.date == dated.valuation]
+    today = [said_of_today(dated.contract, dated.history, dated.valuation) for moment in moments if moment.day.date and moment.day.date == dated.valuation]
     hits = tuple(hit for hit in dated.hits if hit.event.place not in idle)
     by_day = [f"a hit of '{hit.watch.running.name}' counts for the calendar day on which it comes, weekends and "
               f"holidays included; a day runs from one close to the next" for hit in hits if hit.due and hit.days]
     return replace(dated, moments=tuple(moments), watches=watches, hits=hits,
                    assumptions=(*dated.assumptions, *today, *dict.fromkeys(by_day)))
-
-
-def _today(dated: DatedContract) -> str:
-    """Which level an observation on the valuation date uses, for each asset."""
-    names, day = dated.contract.assets, Day(0.0, dated.valuation)
-    history = dated.history
-    fixed = [name for number, name in enumerate(names)
-             if history.level(number, history.observed(number, day)) is not None]
-    if len(fixed) == len(names):
-        what = "that day's fixing"
-    elif fixed:
-        spots = [name for name in names if name not in fixed]
-        what = f"that day's fixing of {', '.join(fixed)} and the market's spot of {', '.join(spots)}, not fixed yet"
-    else:
-        what = "the market's spot"
-    return f"the observation on {dated.valuation}, the valuation date, uses {what}"
 
 
 def _years(start: Day, day: Day) -> float:

@@ -123,6 +123,12 @@ def said(contract: Contract, history: History) -> list[str]:
     later = sorted({date for levels in history.published.values() for date in levels if date > today} if today else ())
     if later:
         found.append(f"fixings after the valuation date are left out, the first of them of {later[0]}")
+    for asset, *rates in history.names:
+        levels, rated = history.published.get(asset, {}), history.published.get(rates[0] if rates else asset, {})
+        alone = sorted(date for date in levels if date not in rated and date < today)
+        if alone:
+            found.append(f"fixings of {asset} on days without one of {rates[0]} are left out, the first of them of "
+                         f"{alone[0]}")
     for asset, dates in contract.adjustments.items():
         for since, known in dates.items():
             when = "" if today is None or since <= today else "; not in force yet, so it changes nothing"
@@ -133,3 +139,29 @@ def said(contract: Contract, history: History) -> list[str]:
             found.append(f"the observation of {asset} on {date} takes {what} (disrupted day); payments keep their "
                          "dates")
     return found
+
+
+def said_of_today(contract: Contract, history: History, today: datetime.date) -> str:
+    """Which level an observation on the valuation date uses, for each asset."""
+    names, day = contract.assets, Day(0.0, today)
+    fixed = [name for number, name in enumerate(names)
+             if history.level(number, history.observed(number, day)) is not None]
+    if len(fixed) == len(names):
+        what = "that day's fixing"
+    elif fixed:
+        spots = [name for name in names if name not in fixed]
+        what = f"that day's fixing of {', '.join(fixed)} and the market's spot of {', '.join(spots)}, not fixed yet"
+    else:
+        what = "the market's spot"
+    halves = "".join(_half_fixed(history, number, day) for number in range(len(names)))
+    return f"the observation on {today}, the valuation date, uses {what}{halves}"
+
+
+def _half_fixed(history: History, number: int, day: Day) -> str:
+    """Says that one fixing alone of a composite level, the asset's or the rate's, is left out."""
+    parts = history.names[number] if history.names else ()
+    lacking = history.missing(number, history.observed(number, day).date)
+    if len(lacking) != 1 or len(parts) == 1 or history.level(number, history.observed(number, day)) is not None:
+        return ""
+    (there,) = (name for name in parts if name not in lacking)
+    return f"; that day's fixing of {there} is left out, for that of {lacking[0]} is not in"

@@ -31,7 +31,7 @@ def date_otherwise(dated: DatedContract) -> tuple[DatedOtherwise, ...]:
         if contract is None:
             found.append(DatedOtherwise(other.reading, None, tuple(faults)))
         else:
-            again, faults = date_contract(contract, dated.valuation, dated.history)
+            again, faults = date_contract(contract, dated.valuation, dated.history, otherwise=True)
             found.append(DatedOtherwise(other.reading, again, tuple(faults)))
     return tuple(found)
 

@@ -20,6 +20,7 @@ from mcx.estimators.estimate import Estimate
 from mcx.leaves.grouped import grouped
 from mcx.leaves.jacobian import inputs, jacobian
 from mcx.leaves.market_map import MarketMap
+from mcx.machine.draw_plan import PLAIN, DrawPlan
 from mcx.machine.sizes import cost
 from mcx.tape.adjoint import leaf_sums
 from mcx.tape.program import LeafKind, Program
@@ -41,17 +42,16 @@ class Coefficients:
 class Derivatives:
     """What one run finds, by parts of the run, without the controls and the controls beside it.
 
-    paths (64,); first (64, numbers) and its controls (64, numbers, 2): by the inputs in their order; second (64, pairs)
-    and its controls (64, pairs, CONTROLS): by the pairs of spots, each asset with itself first; the price of the same
-    paths, by parts (64, 1) and as a whole.
+    first (parts, numbers) and its controls (parts, numbers, 2): by the inputs in their order; second (parts, pairs) and
+    its controls (parts, pairs, CONTROLS): by the pairs of spots, each asset with itself first; the price of the same
+    paths, by parts (the only quantity of `base`) and as a whole.
     """
 
-    paths: np.ndarray
     first: np.ndarray
     control: np.ndarray
     second: np.ndarray
     controls: np.ndarray
-    base: np.ndarray
+    base: Batches
     price: Estimate
 
     def fitted(self) -> Coefficients:
@@ -64,7 +64,7 @@ class Derivatives:
         """First and second derivatives, as quantities by parts of the run."""
         first = self.first - np.einsum("bnc,nc->bn", self.control, coefficients.first)
         second = self.second - np.einsum("bpc,pc->bp", self.controls, coefficients.second)
-        return Batches(self.paths, first), Batches(self.paths, second)
+        return self.base.others(first), self.base.others(second)
 
 
 def _fit(values: np.ndarray, controls: np.ndarray) -> np.ndarray:
@@ -90,9 +90,9 @@ class Differentiator:
         return Differentiator(made, market, contract, values, lower(made.tape, values),
                               jacobian(market, contract, leaves))
 
-    def cost(self) -> float:
+    def cost(self, plan: DrawPlan = PLAIN) -> float:
         """Of one path, by the fixed table of the machine."""
-        return cost(self.program)
+        return cost(self.program, plan)
 
     def derivatives(self, sampling: Sampling) -> Derivatives:
         """One run. Raises what `Sampling.sums` raises."""
@@ -103,7 +103,7 @@ class Differentiator:
             for chosen in (made.derived, made.controls, made.by_score, made.by_path))
         second, controls = self._second(sums.means, first, score)
         control = np.stack([score, by_score - by_path], axis=-1)
-        return Derivatives(sums.paths, first, control, second, controls, sums.means[:, -1:], price)
+        return Derivatives(first, control, second, controls, sums.last(), price)
 
     def _second(self, sums: np.ndarray, first: np.ndarray, control: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Second derivatives by the spots out of those by their logs, and the controls of them. The log is that of the

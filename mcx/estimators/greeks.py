@@ -15,15 +15,16 @@ from itertools import groupby
 import numpy as np
 
 from mcx.checked.market import Market
-from mcx.estimators.batches import FEWEST_PATHS, Batches, Sampling
+from mcx.estimators.batches import Batches, Sampling
 from mcx.estimators.bracket import Refinement
 from mcx.estimators.derivative_tape import pairs_of
 from mcx.estimators.differentiate import Coefficients, Differentiator
+from mcx.estimators.drawn import Drawn
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.ladder import Point, Step, grid, ladder, spot_shifts, today, turning
 from mcx.estimators.methods import PATHWISE, Method, methods
 from mcx.estimators.pace import announce, pace
-from mcx.estimators.plan import Independent, Plan, Precision, plan
+from mcx.estimators.plan import Plan, Precision, plan
 from mcx.estimators.price import refined
 from mcx.estimators.ready import Ready
 from mcx.estimators.revalue import (
@@ -46,6 +47,8 @@ NEAR = 1.0 / 12.0  # years
 NEARBY = 0.01  # of the spots
 ESTIMATORS = ("auto", "pathwise", "likelihood", "mixed")
 REVALUATION = "revaluation"
+AS_ONE = ("assets that move as one are watched together: moved alone its vol would part them, and then of their joint law "
+          "only bounds are known")
 
 
 @dataclass(frozen=True, slots=True)
@@ -86,6 +89,7 @@ class Found:
     notes: tuple[str, ...]
     plan: Plan
     seed: int
+    reduction: tuple[str, ...]
     seconds: float
     ready: Ready
     refinement: Refinement | None
@@ -103,36 +107,38 @@ def sensitivities(
     pieces: int | None = None,
     progress: Callable[[int, int, float], None] | None = None,
     notice: Notice | None = None,
+    reduction: tuple[str, ...] = (),
 ) -> Found:
     """All sensitivities of a contract that were asked for; `pieces` prescribe how fine the steps are where the price lies
-    between bounds.
+    between bounds, `reduction` names methods that change how paths are drawn (`estimators.drawn`).
 
-    Raises Refusal where the estimator asked for is not valid, and NonFinitePath, NonFiniteSum, KeyboardInterrupt as
+    Raises Refusal where the estimator or a method asked for is not valid, RequestError for numbers of paths that points
+    cannot have, and NonFinitePath, NonFiniteSum, KeyboardInterrupt as
     `Sampling.sums` does.
     """
-    return _Run(ready, market, wish, asked, seed, threads, pieces, progress, notice).found()
+    drawn = Drawn(reduction, seed, threads, notice)
+    return _Run(ready, market, wish, asked, drawn, pieces, progress).found()
 
 
 class _Run:
     """One contract's sensitivities under way."""
 
-    def __init__(self, ready: Ready, market: Market, wish: Wish, asked: Precision, seed: int, threads: int | None,
-                 pieces: int | None, progress: Callable[[int, int, float], None] | None, notice: Notice | None):
-        self.ready, self.market, self.wish = ready, market, wish
+    def __init__(self, ready: Ready, market: Market, wish: Wish, asked: Precision, drawn: Drawn, pieces: int | None,
+                 progress: Callable[[int, int, float], None] | None):
+        self.ready, self.market, self.wish, self.drawn = ready, market, wish, drawn
         self.contract = ready.dated.contract
         self.numbers = inputs(market, self.contract)
         self.lines = [line for line in first_order(self.numbers, self.contract) if self._wanted(line.subject)]
         self.curvatures = [line for line in second_order(self.numbers, self.contract) if self._wanted(line.subject)]
-        self.pilot = Sampling(seed, PILOT_PATHS, Stream.PILOT, threads, notice=notice)
-        self.methods = methods(ready, market, wish.estimator, self.pilot)
-        self.bound: dict[str, Differentiator] = {}
+        self._prepare(ready)
         self.plan, self.refinement = self._plan(asked), None
         if ready.unrolled.bracketed:
             self._refine(asked, pieces)
-        announce(self.plan.paths, self._pace(), notice)
+        announce(self.plan.paths, self._pace(), drawn.notice)
         counted = progress and (lambda done, _, error: progress(done, self.plan.paths, error))
-        self.sampling = Sampling(seed, self.plan.paths, Stream.MAIN, threads, counted, notice)
-        self.revaluer = Revaluer.of(self.ready.unrolled.tape, self.contract)
+        self.sampling = replace(drawn.sampling(self.ready, self.plan.paths), progress=counted)
+        self.plan = replace(self.plan, paths=self.sampling.paths)
+        self.revaluer = Revaluer.of(self.ready.unrolled.tape, self.contract, pairs=self.sampling.each == 2)
         self.piloted: dict[str, tuple[Coefficients, Batches, Batches]] = {}
         self.done: dict[str, tuple[Batches, Batches]] = {}
         self.base: tuple[Batches, Estimate] | None = None  # the price of the main run
@@ -141,10 +147,19 @@ class _Run:
         self.notes: list[str] = []
         self.interrupted = False
 
+    def _prepare(self, ready: Ready) -> None:
+        """The contract as it is, how its pilot is drawn, and what is valid for it."""
+        self.ready = ready
+        self.pilot = self.drawn.sampling(ready, PILOT_PATHS, Stream.PILOT)
+        self.methods = methods(ready, self.market, self.wish.estimator, self.pilot)
+        self.bound: dict[str, Differentiator] = {}
+
     def found(self) -> Found:
         begun = time.perf_counter()
         kinks = {self.numbers.index(number): reason
                  for number, reason in without_derivative(self.market, self.contract).items()}
+        kinks |= {k: AS_ONE for k, number in enumerate(self.numbers) if number.kind == "vol"
+                  and number.subject in {self.contract.assets[asset] for asset in self.ready.unrolled.joined}}
         values = [*self._first(kinks), *self._second()]
         base, price = self.base or self.revaluer.price(self.market, self.sampling)
         comparison: list[Value] = []
@@ -161,7 +176,7 @@ class _Run:
         self.notes += [*between(self.ready.dated, self.ready.unrolled.state), *self._near(values), *self._turning()]
         return Found(price, tuple(values), tuple(self.refused), tuple(comparison), tuple(self.choices),
                      self.methods.jumps, tuple(rungs), tuple(points), tuple(self.notes), self.plan, self.sampling.seed,
-                     time.perf_counter() - begun, self.ready, self.refinement, self.interrupted)
+                     self.drawn.names, time.perf_counter() - begun, self.ready, self.refinement, self.interrupted)
 
     def _wanted(self, subject: str) -> bool:
         """Whether an asset's or a pair's line was asked for; a currency's always is."""
@@ -176,23 +191,24 @@ class _Run:
 
     def _refine(self, asked: Precision, pieces: int | None) -> None:
         """Go on with steps so fine that the bounds of the price are close."""
-        self.ready, planned, self.refinement = refined(self.ready, asked, self.plan, self._prices, seed=self.pilot.seed,
-                                                       threads=self.pilot.threads, pieces=pieces)
-        self.plan = replace(planned, paths=max(planned.paths, FEWEST_PATHS))
-        self.methods, self.bound = methods(self.ready, self.market, self.wish.estimator, self.pilot), {}
+        ready, self.plan, self.refinement = refined(self.ready, asked, self.plan, self._prices, seed=self.pilot.seed,
+                                                    threads=self.pilot.threads, pieces=pieces)
+        self._prepare(ready)
 
     def _plan(self, asked: Precision) -> Plan:
         def seconds_for(paths: int) -> float:
             begun = time.perf_counter()
             for method in self.methods.valid:
-                self._bound(method).derivatives(replace(self.pilot, paths=max(paths, FEWEST_PATHS)))
+                self._bound(method).derivatives(self.drawn.sampling(self.ready, paths, Stream.PILOT))
             return time.perf_counter() - begun
 
-        found = plan(asked, lambda paths: Independent(self._prices(paths)), seconds_for, exact=self.ready.program.outputs[0] < 0, pace=self._pace())
-        return replace(found, paths=max(found.paths, FEWEST_PATHS))
+        sampler = self.drawn.sampler(self.ready)
+        found = plan(asked, sampler.independent, seconds_for, exact=self.ready.program.outputs[0] < 0, pace=self._pace())
+        return found if asked.seconds is None else replace(found, paths=sampler.within_time(found.paths))
 
     def _pace(self) -> float:
-        return pace((self._bound(method).program for method in self.methods.valid), self.pilot.threads)
+        programs = (self._bound(method).program for method in self.methods.valid)
+        return pace(programs, self.pilot.threads) / self.pilot.each
 
     def _bound(self, method: Method) -> Differentiator:
         """A method's tape on the market as it stands."""
@@ -218,7 +234,7 @@ class _Run:
             coefficients = self._pilot(method)[0]
             found = self._bound(method).derivatives(self.sampling)
             self.done[method.name] = found.with_controls(coefficients)
-            self.base = Batches(found.paths, found.base), found.price
+            self.base = found.base, found.price
             self.interrupted = found.price.paths < self.sampling.paths
         return self.done[method.name]
 
@@ -261,8 +277,8 @@ class _Run:
         valid = self.methods.for_kind(kind)
         if len(valid) < 2:
             return valid[0] if valid else None
-        burden = {method.name: estimate(self._pilot(method)).standard_error**2 * self._bound(method).cost()
-                  for method in valid}
+        burden = {method.name: estimate(self._pilot(method)).standard_error**2
+                  * self._bound(method).cost(self.pilot.plan) for method in valid}
         best = min(valid, key=lambda method: burden[method.name])
         others = ", ".join(f"{_times(burden[method.name], burden[best.name])} {method.name}" for method in valid
                            if method is not best)
@@ -271,8 +287,12 @@ class _Run:
 
     def _theta(self, base: Batches) -> Value:
         line = Sensitivity("theta", "", "1 day", f"{self.contract.currency} per calendar day", (), ())
-        estimate = theta(self.ready, self.market, self.sampling, base).estimate(np.array([self.contract.size]))
+        estimate = theta(self.ready, self.market, self._sampled, base).estimate(np.array([self.contract.size]))
         return Value(line, estimate, REVALUATION, "the document read one calendar day on")
+
+    def _sampled(self, ready: Ready) -> Sampling:
+        """The paths of the main run, on other steps of the contract."""
+        return replace(self.sampling, plan=self.drawn.sampler(ready).scheme.plan)
 
     def _near(self, values: list[Value]) -> Iterator[str]:
         """A word about a first date so near that likelihood ratios scatter."""
@@ -310,7 +330,7 @@ class _Run:
                     self.notes.append(f"no revaluation for the {number}: moved by ±{step:g}, {reason}")
                 else:
                     steps[number] = step
-        found = central_differences(self.revaluer, self.market, steps, self.sampling)
+        found = central_differences(self.revaluer, self.market, steps, self.sampling) if steps else None
         at = {self.numbers.index(number): column for column, number in enumerate(steps)}
         for line in self.lines:
             if all(column in at for column in line.columns):
@@ -345,7 +365,7 @@ class _Run:
             if method is None:
                 return None
             found = method.on(market).derivatives(self.sampling).with_controls(self._pilot(method)[0])[0]
-            return Batches(found.paths, found.means[:, spots])
+            return found.through(np.eye(len(self.numbers))[:, spots])
 
         return ladder(self.revaluer, self.market, self._moving(), self.wish.spot_moves, self.sampling, base, deltas)
 

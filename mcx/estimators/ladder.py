@@ -65,7 +65,7 @@ def ladder(
     found = []
     for number, (move, there) in enumerate(zip(moves, markets, strict=True)):
         parts, price = revaluer.price(there, sampling)
-        change = Batches(base.paths, parts.means - base.means).estimates()[0]
+        change = parts.less(base).estimates()[0]
         places = turning(flags[number], flags[number + 1]) if number + 1 < len(flags) else ()
         slopes = deltas(there)
         found.append(Step(move, price, change, slopes.estimates() if slopes else (), places))
@@ -88,7 +88,7 @@ def grid(
                 found.append(Point(move, vol_move, None, None, reason))
                 continue
             parts, price = revaluer.price(moved(market, shifts), sampling)
-            change = Batches(base.paths, parts.means - base.means).estimates()[0]
+            change = parts.less(base).estimates()[0]
             found.append(Point(move, vol_move, price, change))
     return tuple(found)
 

@@ -15,6 +15,7 @@ from mcx.estimators.derivative_tape import DerivativeTape, derivative_tape, with
 from mcx.estimators.differentiate import Differentiator
 from mcx.estimators.proxy import with_proxy
 from mcx.estimators.ready import Ready
+from mcx.estimators.reduction.antithetic import paired
 from mcx.faults import Refusal
 from mcx.leaves.market_map import MarketMap
 from mcx.machine.run import values_by_path
@@ -71,7 +72,7 @@ class Methods:
 
 def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = None) -> Methods:
     """The valid estimators among those asked for ('auto' for all); with a pilot, likelihood ratios have a smooth
-    stand-in as a control. Raises Refusal where what was asked for is not valid, with the condition that forbids it."""
+    stand-in as a control, and tapes are of pairs where its paths are. Raises Refusal where what was asked for is not valid, with the condition that forbids it."""
     contract, unrolled = ready.dated.contract, ready.unrolled
     price = unrolled.tape.outputs[0]
     tape = without_first_levels(drop_dead_code(replace(unrolled.tape, outputs=(price,), sums=())))
@@ -100,6 +101,8 @@ def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = N
         levels = bool(compared) and not in_extremes(tape, blended)
         made = derivative_tape(own, unrolled.grid, len(contract.assets), uniform_values(own, values), pathwise=pathwise,
                                likelihood=likelihood, second=not still, proxy=proxy, levels=levels)
+        if pilot and pilot.each == 2:
+            made = replace(made, tape=paired(made.tape))
         refusals = {}
         if likelihood and (reason := read_today(tape, known)):
             refusals |= {"spot": reason, "fx spot": reason}

@@ -19,9 +19,9 @@ from mcx.estimators.estimate import Estimate
 from mcx.faults import RequestError
 from mcx.leaves.market_map import MarketMap
 from mcx.machine.draw_plan import MOST_POINTS, DrawPlan
-from mcx.machine.orders import bridge, components
+from mcx.machine.orders import bridge, components, early_bridge
 from mcx.machine.run import Notice, ScrambleSums, Stream, run_scrambles
-from mcx.tape.program import Leaf, LeafKind, Program
+from mcx.tape.program import Leaf, LeafKind, Program, Tape
 from mcx.tape.steps import Grid
 
 # Means of smooth payoffs over a net are skewed, with an excess kurtosis of 3 and more (a point far out decides them):
@@ -67,9 +67,15 @@ def clock(market: MarketMap, grid: Grid) -> np.ndarray:
     return market.values(leaves).reshape(len(grid.times) - 1, len(grid.assets))
 
 
-def net_draws(net: Net, order: Order, variances: np.ndarray) -> DrawPlan:
-    """The plan of draws for a net on a contract whose `clock` is given."""
-    orders = {Order.BRIDGE: bridge, Order.COMPONENTS: components}
+def may_end(observed: Tape) -> bool:
+    """Whether a contract, as the tape that reads its levels, may end on one of its dates."""
+    return any(output.kind == "end" for output in observed.outputs)
+
+
+def net_draws(net: Net, order: Order, variances: np.ndarray, early: bool = False) -> DrawPlan:
+    """The plan of draws for a net on a contract whose `clock` is given; `early`: a bridge has the early dates early, as
+    a contract that may end on them wants it."""
+    orders = {Order.BRIDGE: early_bridge if early else bridge, Order.COMPONENTS: components}
     mixed = order in orders and variances.size > 0
     return DrawPlan(net.scrambles, order=orders[order](variances) if mixed else None)
 
@@ -112,18 +118,23 @@ def net_estimates(sums: ScrambleSums, scrambles: int | None = None) -> tuple[Est
 
 
 def _deviation(means: np.ndarray, part: float) -> float:
-    """The standard deviation of a scramble's mean, from those of all; `part`: that of one path, over the points.
+    """The standard deviation of a scramble's mean."""
+    return max(float(means.std(ddof=1)), least_deviation(means, part))
+
+
+def least_deviation(means: np.ndarray, part: float) -> float:
+    """What the standard deviation of a scramble's mean is at least, from the means of all (parts,), where most of them
+    agree; else 0. `part`: the deviation of one path, over the points.
 
     Points so even that nearly every scramble has as many on each side of a jump give means that are equal, but for a
     few: their spread alone would promise an exact result where none happened to differ. Then it is that of a
     proportion with two more of either kind (A. Agresti, B. Coull, "Approximate is better than 'exact' for interval
     estimation of binomial proportions", The American Statistician 52 (1998), 119-126), times the jump.
     """
-    found = float(means.std(ddof=1))
     middle = np.sort(means)[len(means) // 2]
     odd = int(np.sum(np.abs(means - middle) > SAME * part))
     if part == 0.0 or 2 * odd > len(means):
-        return found
+        return 0.0
     jump = max(2.0 * part, float(np.ptp(means)))
     share = (odd + 2) / (len(means) + 4)
-    return max(found, jump * math.sqrt(share * (1.0 - share)))
+    return jump * math.sqrt(share * (1.0 - share))

@@ -151,7 +151,7 @@ def refined(
     """The contract with steps so fine that the bounds of its price are close enough, and how many paths there is time for
     then. `prices(paths)` gives the price on each path of the pilot."""
     target = planned.target or NORMAL_95 * float(prices(PILOT).std(ddof=1)) / math.sqrt(planned.paths)
-    unrolled, program, refinement = refine(lambda number: made(ready.dated, ready.market, number), target,
+    unrolled, program, refinement = refine(lambda number: made(ready.dated, ready.market, number, ready.apart), target,
                                            seed=seed, threads=threads, pieces=pieces)
     if asked.seconds is not None:  # finer steps leave time for fewer paths
         planned = replace(planned, paths=whole_groups(max(planned.paths / refinement.cost, GROUP)))

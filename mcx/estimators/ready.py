@@ -19,40 +19,42 @@ from mcx.tape.weights import weigh
 @dataclass(frozen=True, slots=True)
 class Ready:
     """A dated contract on a market, as a program that can be run; `pieces`: how far its steps are refined
-    (`estimators.bracket`)."""
+    (`estimators.bracket`); `apart`: without taking assets that move as one for one, since the market will be moved."""
 
     dated: DatedContract
     market: MarketMap
     unrolled: Unrolled
     program: Program
     pieces: int = 1
+    apart: bool = False
 
     def expanded(self, observed: Tape) -> Tape:
         """A tape that reads levels, as one that reads normals; on this market."""
-        weighted = weigh(observed, fixed_values(observed, self.dated.contract))
-        return expand_levels(weighted.tape, self.market.nodes(), self.market.makeup(), self.pieces)[0]
+        makeup = self.market.makeup(self.apart)
+        weighted = weigh(observed, fixed_values(observed, self.dated.contract), leaders=makeup.leaders)
+        return expand_levels(weighted.tape, self.market.nodes(), makeup, self.pieces)[0]
 
     def lowered(self, tape: Tape) -> Program:
         """The program of another tape on the same market."""
         return lower(tape, self.market.values(tape.leaves))
 
 
-def prepare(dated: DatedContract, market: Market) -> tuple[Ready | None, tuple[Fault, ...]]:
+def prepare(dated: DatedContract, market: Market, apart: bool = False) -> tuple[Ready | None, tuple[Fault, ...]]:
     """The program of a contract on a market, and what the tape refuses.
 
     Where several assets are watched together (`unrolled.bracketed`) its steps are not refined yet; `price.refined` does
-    that.
+    that. `apart` where the program will be run on markets in which assets that move as one do so no more.
     """
     market_map = MarketMap.of(market, dated)
     if faults := market_map.faults():
         return None, tuple(faults)
-    unrolled, program = made(dated, market_map, 1)
+    unrolled, program = made(dated, market_map, 1, apart)
     if program is None:
         return None, unrolled.faults
-    return Ready(dated, market_map, unrolled, program), ()
+    return Ready(dated, market_map, unrolled, program, apart=apart), ()
 
 
-def made(dated: DatedContract, market: MarketMap, pieces: int) -> tuple[Unrolled, Program | None]:
+def made(dated: DatedContract, market: MarketMap, pieces: int, apart: bool = False) -> tuple[Unrolled, Program | None]:
     """The contract with its steps cut into at least so many pieces where assets are watched together."""
-    unrolled = unroll(dated, nodes=market.nodes(), makeup=market.makeup(), pieces=pieces)
+    unrolled = unroll(dated, nodes=market.nodes(), makeup=market.makeup(apart), pieces=pieces)
     return unrolled, None if unrolled.faults else lower(unrolled.tape, market.values(unrolled.tape.leaves))

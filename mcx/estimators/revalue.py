@@ -11,8 +11,9 @@ import numpy as np
 from mcx.checked.contract import Contract
 from mcx.checked.conversions import simulated_rates
 from mcx.checked.market import Market
-from mcx.estimators.batches import Batches, Sampling
+from mcx.estimators.batches import Batches, Sampling, joined
 from mcx.estimators.estimate import Estimate
+from mcx.estimators.reduction.antithetic import paired
 from mcx.leaves.correlation import correlation_matrix
 from mcx.leaves.grouped import Grouped, grouped
 from mcx.leaves.jacobian import Input, moved
@@ -36,10 +37,12 @@ class Revaluer:
     leaves: Grouped
 
     @staticmethod
-    def of(tape: Tape, contract: Contract, later: float = 0.0) -> Revaluer:
-        """`tape` has the price as its first output; `later`: years after the valuation date."""
+    def of(tape: Tape, contract: Contract, later: float = 0.0, pairs: bool = False) -> Revaluer:
+        """`tape` has the price as its first output; `later`: years after the valuation date; `pairs`: each path beside
+        its mirror image."""
         price = tape.outputs[0]
         alone = drop_dead_code(replace(tape, outputs=(price,), sums=(Sum(price.value),)))
+        alone = paired(alone) if pairs else alone
         return Revaluer(alone, contract, grouped(seen_from(alone.leaves, later)))
 
     def price(self, market: Market, sampling: Sampling) -> tuple[Batches, Estimate]:
@@ -98,8 +101,8 @@ def central_differences(
     found = []
     for number, step in steps.items():
         up, down = (revaluer.price(moved(market, {number: side * step}), sampling)[0] for side in (1.0, -1.0))
-        found.append((up.means - down.means) / (2.0 * step))
-    return Batches(up.paths, np.concatenate(found, axis=1))
+        found.append(up.less(down).through(np.array([[0.5 / step]])))
+    return joined(found)
 
 
 def second_differences(
@@ -118,8 +121,9 @@ def second_differences(
     for one, other in pairs:
         h, k = step_of(one, size), step_of(other, size)
         if one == other:
-            found.append((at((one, h)) - 2.0 * base.means + at((one, -h))) / h**2)
+            bent, size_of_step = at((one, h)) - 2.0 * base.means + at((one, -h)), h**2
         else:
             corners = (math.copysign(1.0, a * b) * at((one, a), (other, b)) for a in (h, -h) for b in (k, -k))
-            found.append(sum(corners) / (4.0 * h * k))
-    return Batches(base.paths, np.concatenate(found, axis=1))
+            bent, size_of_step = sum(corners), 4.0 * h * k
+        found.append(replace(base, means=bent).through(np.array([[1.0 / size_of_step]])))
+    return joined(found)

@@ -8,7 +8,7 @@ times a day nearer, so nothing is drawn anew.
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import replace
 
 from mcx.checked.market import Market
@@ -23,21 +23,23 @@ DAY = 1.0 / 365.0
 SAME_TIME = 1e-9
 
 
-def theta(ready: Ready, market: Market, sampling: Sampling, base: Batches) -> Batches:
-    """The price one calendar day on less the price today, in the price's unit, as a single quantity; `base` is the
-    price today on the same paths.
+def theta(ready: Ready, market: Market, sampled: Callable[[Ready], Sampling], base: Batches) -> Batches:
+    """The price one calendar day on less the price today, in the price's unit, as a single quantity; `sampled` says how
+    paths are drawn on a contract's steps, `base` is the price today on the same paths.
 
     Watched stretches are split where the curves bend on either day, so that the bridges of both are exact; then the
     price today is taken on that grid as well.
     """
-    contract, tape = ready.dated.contract, ready.unrolled.tape
+    contract, sampling = ready.dated.contract, sampled(ready)
+    pairs = sampling.each == 2
     if ready.dated.watches:
         nodes = ready.market.nodes()
-        tape = unroll(ready.dated, nodes=sorted({*nodes, *(node + DAY for node in nodes)}),
-                      makeup=ready.market.makeup(), pieces=ready.pieces).tape
-        base, _ = Revaluer.of(tape, contract).price(market, sampling)
-    tomorrow, _ = Revaluer.of(tape, contract, later=DAY).price(_nearer(market), sampling)
-    return Batches(base.paths, tomorrow.means - base.means)
+        ready = replace(ready, unrolled=unroll(ready.dated, nodes=sorted({*nodes, *(node + DAY for node in nodes)}),
+                                               makeup=ready.market.makeup(ready.apart), pieces=ready.pieces))
+        sampling = sampled(ready)
+        base, _ = Revaluer.of(ready.unrolled.tape, contract, pairs=pairs).price(market, sampling)
+    later = Revaluer.of(ready.unrolled.tape, contract, later=DAY, pairs=pairs)
+    return later.price(_nearer(market), sampling)[0].less(base)
 
 
 def _nearer(market: Market) -> Market:

@@ -69,6 +69,20 @@ def target_of(target: str | float | None) -> float | None:
     return found
 
 
+def check_target(target: str | float | None, *, notional: bool, title: str) -> None:
+    """Raises RequestError where a target is written in a unit that the contract's price does not have. A bare number of
+    a program is in the unit of the price; a text says which it is."""
+    if not isinstance(target, str):
+        return
+    share = target.strip().endswith(tuple(UNITS))
+    if notional and not share:
+        raise RequestError(f"'{title}' is priced in parts of its notional; write the target in % or bp, as '99.5%', "
+                           f"not '{target}'")
+    if share and not notional:
+        raise RequestError(f"'{title}' has no notional to take a share of; write the target as money per unit, not "
+                           f"'{target}'")
+
+
 def _parted(values: str | Sequence) -> Sequence:
     return [part.strip() for part in values.split(",")] if isinstance(values, str) else values
 

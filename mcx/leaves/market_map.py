@@ -31,6 +31,7 @@ from mcx.tape.unroll import last_read
 
 MONTHLY, WEEKLY = 12, 52
 SOON = 1e-6  # years: before any node
+SAME = 1e-12  # of growth and variance: no more than rounding
 
 
 @dataclass(frozen=True, slots=True)
@@ -105,15 +106,37 @@ class MarketMap:
             times |= {*paid.share_times, *(() if asset.decrement else paid.cash_times)}
         return tuple(sorted(time for time in times if time > 0.0))
 
-    def makeup(self) -> Makeup:
-        """How the tape makes levels of what is simulated."""
+    def makeup(self, apart: bool = False) -> Makeup:
+        """How the tape makes levels of what is simulated; `apart` where no two assets shall be taken for one."""
         return Makeup(
             cash={number: WEEKLY if self.quotes[number].decrement else MONTHLY
                   for number, paid in enumerate(self._payouts)
                   if any(self.last is None or time < self.last + SOON for time in paid.cash_times)},
             ex=frozenset((number, when) for number, paid in enumerate(self._payouts) for when in paid.share_times),
             rates={number: meets.number for number, meets in enumerate(self._exchanges)
-                   if meets and meets.number is not None})
+                   if meets and meets.number is not None},
+            leaders={} if apart else self._leaders())
+
+    def _leaders(self) -> dict[int, int]:
+        """For each asset that always moves as one before it does, the first such."""
+        found: dict[int, int] = {}
+        for asset in range(len(self.quotes)):
+            leader = next((other for other in range(asset) if other not in found and self._as_one(other, asset)), None)
+            if leader is not None:
+                found[asset] = leader
+        return found
+
+    def _as_one(self, one: int, other: int) -> bool:
+        """Whether two assets are perfectly correlated and have the same growth and vols throughout; what cash dividends
+        take from the spot moves otherwise than the rest, so with these two assets differ."""
+        numbers = {meets.number if meets else None for meets in (self._exchanges[one], self._exchanges[other])}
+        if (self._correlation[one, other] != 1.0 or len(numbers) > 1
+                or any(pays_cash(self.quotes[asset]) for asset in (one, other))):
+            return False
+        times = np.array([*(nodes := self.nodes()), *(node + SOON for node in nodes), 1.0 + max(nodes, default=0.0)])
+        moves = ([self._growth(asset, times), self._variance(asset, -1, np.zeros_like(times), times)]
+                 for asset in (one, other))
+        return np.allclose(*moves, rtol=SAME, atol=SAME)
 
     def forward(self, asset: str, time: float) -> float:
         """The forward of an asset in the contract's currency, at a fixed rate of exchange (quanto) or at that of the

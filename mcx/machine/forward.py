@@ -283,10 +283,10 @@ def _watch(form, y, registers, scalars, a, b, c, d, lanes):
         p, q, square, u = registers[a], registers[b], registers[c], registers[d]
         for i in range(lanes):
             d0, d1 = max(abs(p[i]), CLOSEST), max(abs(q[i]), CLOSEST)
-            half = square[i] / (d0 * d1)
-            ratio = 1.0 + half + np.sqrt(half * (half + 2.0))
-            small = u[i] * (1.0 + ratio) <= ratio
-            passed, rest = d0 if small else d0 * ratio, d1 * ratio if small else d1
+            product = d0 * d1
+            larger = product + square[i] + np.sqrt(square[i] * (square[i] + 2.0 * product))
+            small = u[i] * (product + larger) <= larger
+            passed, rest = d0 * d0 if small else larger, larger if small else d1 * d1
             y[i] = passed / (passed + rest)
     elif form == Form.LOOKUP_RSS:
         x, last = registers[a], c - b

@@ -7,11 +7,19 @@ Brownian path. An order is an orthogonal map from the coordinates' normals to th
 whose ends are known, the most uncertain first. In terms of the normals of stretches such a step turns two of
 them by an angle, so that a path of n steps takes n - 1 turns.
 
+*Early bridge*: the same, halved in the cube root of the variance. Where a contract may end on each of its dates most
+paths end on the first few, and what they decide should not be left to late coordinates. On autocalls of 8 to 24 dates
+that lowers the variance of scrambled points by 1.1 to 2 times against halving the variance; the square root does less,
+the fourth root about the same.
+
 *Components*: the first coordinates are the leading principal components of the path at the dates (P. Acworth, M.
 Broadie, P. Glasserman, "A comparison of some Monte Carlo and quasi-Monte Carlo techniques for option pricing", 1998).
 LEADING of them carry 95 % of the variance; what is left is taken in the order of a bridge, bent so that it is
-orthogonal to them. That is a bridge after a map of rank LEADING: its cost does not grow with the square of the
-number of steps, as that of all components would, and no component beyond was seen to reduce an error.
+orthogonal to them. That is a bridge after a map of rank LEADING: its cost does not grow with the square of the number
+of steps, as that of all components would, and more of them reduce no error: on an Asian call of 52 dates and 2^16
+points the variance ratio is 91,000, 89,000, 71,000 and 75,000 with 4, 8, 16 and all components, each +- 18 %; with 1
+and 2 it is 68,000 and 99,000. All of 52 components would take some 2,700 multiplications a path, which is more than the
+rest of that path.
 """
 
 from __future__ import annotations
@@ -22,6 +30,7 @@ import numpy as np
 
 from mcx.machine.draw_plan import LEADING, PathOrder
 
+EARLY = 3.0  # the root of the variance that an early bridge halves
 COMPONENT_STEPS = 512  # beyond, the eigenvectors take longer to find than many a run
 
 
@@ -30,19 +39,24 @@ def bridge(clock: np.ndarray) -> PathOrder:
     return _order(clock, components=False)
 
 
+def early_bridge(clock: np.ndarray) -> PathOrder:
+    """The order of a bridge that has the early dates early, after the end. See `bridge`."""
+    return _order(clock, components=False, root=EARLY)
+
+
 def components(clock: np.ndarray) -> PathOrder:
     """The order of principal components, of at most COMPONENT_STEPS steps; that of a bridge beyond. See `bridge`."""
     return _order(clock, components=1 < len(clock) <= COMPONENT_STEPS)
 
 
-def _order(clock: np.ndarray, components: bool) -> PathOrder:
+def _order(clock: np.ndarray, components: bool, root: float = 1.0) -> PathOrder:
     steps, assets = clock.shape
     coordinates = np.empty((steps, assets), dtype=np.int32)
     bent = np.zeros((2, assets, steps, LEADING)) if components else np.empty((2, 0, 0, LEADING))
     pairs, turns = [], []
     for asset in range(assets):
         variances = _positive(clock[:, asset])
-        turned, angles = _halve(variances)
+        turned, angles = _halve(variances, root)
         first = np.concatenate([[0], turned[:, 1]])  # by rank: the normal that the coordinate begins as
         coordinates[first, asset] = np.arange(steps) * assets + asset
         pairs.append(turned * assets + asset)
@@ -59,17 +73,18 @@ def _positive(variances: np.ndarray) -> np.ndarray:
     return np.maximum(variances, smallest if smallest > 0.0 else 1.0)
 
 
-def _halve(variances: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Stretches halved, the most uncertain first: of each the first step and that of its second half, (steps - 1, 2);
-    and the roots of the shares of variance of both halves, (steps - 1, 2)."""
+def _halve(variances: np.ndarray, root: float) -> tuple[np.ndarray, np.ndarray]:
+    """Stretches halved in this root of the variance, those first where most is open then: of each the first step and that
+    of its second half, (steps - 1, 2); and the roots of the shares of variance of both halves, (steps - 1, 2)."""
     known = np.concatenate([[0.0], np.cumsum(variances)])
+    clock = known ** (1.0 / root)
     pairs, turns = [], []
     waiting: list[tuple[float, int, int, int]] = []
 
     def wait(start: int, end: int) -> None:
         if end - start > 1:
-            middle = start + 1 + int(np.argmin(np.abs(known[start + 1 : end] - 0.5 * (known[start] + known[end]))))
-            share = (known[middle] - known[start]) * (known[end] - known[middle]) / (known[end] - known[start])
+            middle = start + 1 + int(np.argmin(np.abs(clock[start + 1 : end] - 0.5 * (clock[start] + clock[end]))))
+            share = (clock[middle] - clock[start]) * (clock[end] - clock[middle]) / (clock[end] - clock[start])
             heappush(waiting, (-float(f"{share:.12e}"), start, middle, end))  # equal steps come in order of time
 
     wait(0, len(variances))

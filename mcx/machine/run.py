@@ -67,13 +67,14 @@ class ScrambleSums:
     """The result of a run over scrambled points: means, and squares about them, (scrambles, outputs), each over
     `points` points.
 
-    `interrupted`: scrambles are missing; those here are whole.
+    `interrupted`: scrambles are missing; those here are whole. sums (scrambles, sums): those that the program asks for.
     """
 
     points: int
     means: np.ndarray
     squares: np.ndarray
     interrupted: bool = False
+    sums: np.ndarray = field(default_factory=lambda: np.zeros((0, 0)))
 
 
 class NonFinitePath(ArithmeticError):
@@ -144,7 +145,7 @@ def run(
                 numbers = range(first_path + first, first_path + first + count)
                 means, squares, bad, sums = crew.run(numbers)
                 _refuse_bad(bad, numbers, code, seed, stream)
-                _refuse_bad_sum(sums, first_path + first, seed, stream)
+                _refuse_bad_sum(sums, numbers, seed, stream)
                 totals.add(count, means, np.zeros_like(squares) if plan.strata else squares)
                 parts.add(count, sums)
                 noted = tuple(Snapshot(*reached_then) for reached_then in totals.noted)
@@ -180,35 +181,37 @@ def run_scrambles(
         raise ValueError(f"a scramble has whole groups of {GROUP} points, not {points}")
     code = prepare(program)
     paths = plan.scrambles * points
-    whole: list[tuple[np.ndarray, np.ndarray]] = []  # means and squares of each whole scramble
+    whole: list[tuple[np.ndarray, np.ndarray, np.ndarray]] = []  # means, squares and sums of each whole scramble
     with _crew(code, seed, stream, threads, lanes, notice, plan) as crew:
-        from mcx.machine.sums import Totals
+        from mcx.machine.sums import Batches, Totals
 
         batch = batch_for(code, crew.lanes)
-        totals = Totals(len(code.outputs), points, ())
+        totals, parts = Totals(len(code.outputs), points, ()), Batches(code.sums, 0)
         try:
             for first in range(0, paths, batch):
                 numbers = _numbers(first, min(first + batch, paths), points)
-                means, squares, bad, _ = crew.run(numbers)
+                means, squares, bad, sums = crew.run(numbers)
                 _refuse_bad(bad, numbers, code, seed, stream)
+                _refuse_bad_sum(sums, numbers, seed, stream)
                 done = 0
                 while done < len(numbers):
                     count = min(points - totals.paths, len(numbers) - done)
                     groups = slice(done // GROUP, (done + count) // GROUP)
                     totals.add(count, means[groups], squares[groups])
+                    parts.add(count, sums[groups])
                     done += count
                     if totals.paths == points:
-                        whole.append((totals.mean, totals.squares))
-                        totals = Totals(len(code.outputs), points, ())
+                        whole.append((totals.mean, totals.squares, parts.sums.sum(axis=0)))
+                        totals, parts = Totals(len(code.outputs), points, ()), Batches(code.sums, 0)
                 if progress and len(whole) > 1:
-                    prices = np.array([mean[0] for mean, _ in whole])
+                    prices = np.array([mean[0] for mean, *_ in whole])
                     error = prices.std(ddof=1) / np.sqrt(len(whole))
                     progress(first + len(numbers), float(prices.mean()), float(error))
         except KeyboardInterrupt:
             if len(whole) < 2:
                 raise
-    means, squares = map(np.array, zip(*whole, strict=True))
-    return ScrambleSums(points, means, squares, interrupted=len(whole) < plan.scrambles)
+    means, squares, sums = map(np.array, zip(*whole, strict=True))
+    return ScrambleSums(points, means, squares, interrupted=len(whole) < plan.scrambles, sums=sums)
 
 
 def _numbers(first: int, last: int, points: int) -> np.ndarray:
@@ -296,7 +299,7 @@ def _refuse_bad(bad: np.ndarray, numbers: range | np.ndarray, code: KernelCode, 
         raise NonFinitePath(int(numbers[GROUP * int(found[0]) + path]), output, seed, stream)
 
 
-def _refuse_bad_sum(sums: np.ndarray, first: int, seed: int, stream: int) -> None:
+def _refuse_bad_sum(sums: np.ndarray, numbers: range | np.ndarray, seed: int, stream: int) -> None:
     if not np.isfinite(sums).all():
         group, number = np.argwhere(~np.isfinite(sums))[0].tolist()
-        raise NonFiniteSum(number, first + GROUP * group, seed, stream)
+        raise NonFiniteSum(number, int(numbers[GROUP * group]), seed, stream)

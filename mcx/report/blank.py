@@ -10,9 +10,8 @@ from collections.abc import Iterator, Sequence
 from itertools import combinations
 
 from mcx.checked.dealer_quote import OF_NOTIONAL, OF_UNITS
-from mcx.checked.formula import Formula, Name, walk
 from mcx.checked.payoff import MONEY, MULTIPLES, Deliver, Payoff, Term
-from mcx.report.settled import right_sides
+from mcx.checked.read_contract import uses_period
 from mcx.report.wording import figure
 
 WIDTH = 34  # where the words about a blank begin
@@ -48,17 +47,6 @@ def _line(key: str, value: str = "", about: str = "", indent: int = 0) -> str:
     return f"{written:<{WIDTH}} # {about}" if about else written
 
 
-def _uses_period(payoff: Payoff) -> bool:
-    """Whether anything in the definition goes by year fractions, so that a day count must be stated."""
-    formulas: list[Formula | None] = [let.formula for let in payoff.lets]
-    formulas += [running.formula for running in payoff.running]
-    formulas += [event.condition for event in payoff.events]
-    formulas += [right for event in payoff.events for action in (*event.then, *event.otherwise)
-                 for right in right_sides(action)]
-    parts = (part for formula in formulas if formula is not None for part in walk(formula))
-    return any(isinstance(part, Name) and part.name == "period" for part in parts)
-
-
 def _contract(payoff: Payoff, assets: Sequence[str]) -> Iterator[str]:
     yield f"# A contract on the definition '{payoff.name}'. Fill in what stands empty."
     yield f"contract: New {payoff.name.replace('_', ' ')} on {' and '.join(assets)}"
@@ -68,7 +56,7 @@ def _contract(payoff: Payoff, assets: Sequence[str]) -> Iterator[str]:
         yield _line("denomination", about="nominal amount of one note: only whole shares of it are delivered")
     yield f"assets: [{', '.join(assets)}]"
     yield _line("start", about="date from which periods and years count")
-    if _uses_period(payoff):
+    if uses_period(payoff):
         yield _line("day_count", about="as 30/360 or Actual/360")
     yield _line("settlement", about="lag of payments, as 2 business days")
     yield "calendar:"

@@ -15,8 +15,11 @@ from mcx.tape.state import State
 def calendar(contracts: Iterable[tuple[DatedContract, State | None]]) -> CalendarView:
     """Fixings, decisions and payments from the valuation date on, in order of time; of contracts that have ended only
     what is still owed. Without a state nothing is known of the past, and all dates are listed."""
+    contracts = list(contracts)
     lines = [line for dated, state in contracts for line in _lines(dated, state)]
-    return CalendarView(tuple(line for _, line in sorted(lines, key=lambda each: (each[0], each[1].contract))))
+    versions = dict.fromkeys(dated.calendar_version for dated, _ in contracts if dated.calendar_version)
+    return CalendarView(tuple(line for _, line in sorted(lines, key=lambda each: (each[0], each[1].contract))),
+                        tuple(versions))
 
 
 def _lines(dated: DatedContract, state: State | None) -> Iterator[tuple[float, CalendarLine]]:

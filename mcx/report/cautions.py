@@ -83,9 +83,7 @@ def assumptions(dated: DatedContract, market: Market, market_map: MarketMap) -> 
     contract = dated.contract
     if dated.calendar_version:
         yield f"holidays as listed by {dated.calendar_version}"
-    paid = [due for moment in dated.moments for event in moment.events for due in event.due.values()]
-    paid += [day for hit in dated.hits for due in hit.due.values() for day in due]
-    end, last = dated.last, max([dated.last, *paid], key=lambda day: day.time)
+    end, last = dated.last, dated.last_paid
     curves = [(f"the rates of {contract.currency}", market.rates[contract.currency], last, "forward rate")]
     if contract.currency in market.funding:
         curves.append((f"the funding spreads of {contract.currency}", market.funding[contract.currency], last,

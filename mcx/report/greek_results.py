@@ -9,6 +9,7 @@ is not in percent of the notional is in the contract's currency, for the whole n
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import ClassVar
 
 from mcx.report.results import Bracket, Planned, Result
 
@@ -16,14 +17,16 @@ from mcx.report.results import Bracket, Planned, Result
 @dataclass(frozen=True, slots=True)
 class Greek(Result):
     """One sensitivity. `asset` is the asset, the pair ('harbour/quarry') or, for rho and funding, the currency; `tenor`
-    the node of the curve as written, 'all' for all its nodes at once, '' where there is one number only. `resolved`:
-    the value is at least twice its error. `note` says what is known of a bias."""
+    the node of the curve as written, 'all' for all its nodes at once, '' where there is one number only. `interval95`
+    is by Student's t for the number of independent parts that the error comes from. `resolved`: the value is at least
+    twice its error. `note` says what is known of a bias."""
 
     name: str
     asset: str
     tenor: str
     value: float
     standard_error: float
+    interval95: tuple[float, float]
     unit: str
     estimator: str
     resolved: bool
@@ -99,6 +102,7 @@ class GreeksResult(Result):
     that of the middle. `bump`, `assets`, `spot_moves` and `vol_moves` repeat the request.
     """
 
+    MAIN: ClassVar[str] = "greeks"
     contract: str
     payoff: str
     valuation: str | None
@@ -145,3 +149,7 @@ class GreeksTable(Result):
     @property
     def interrupted(self) -> bool:
         return bool(self.not_valued) or any(result.interrupted for result in self.contracts)
+
+    def rows(self) -> list[dict]:
+        """The sensitivities of all contracts."""
+        return [{"contract": each.contract, **row} for each in self.contracts for row in each.rows()]

@@ -14,6 +14,7 @@ from mcx.report.cautions import assumptions, cautions, limits
 from mcx.report.greek_results import AssetDelta, Greek, GreeksResult, GridPoint, Jump, Refused, Rung
 from mcx.report.plausible import implausible
 from mcx.report.results import Planned
+from mcx.report.state import standing
 from mcx.report.summary import NO_REDUCTION, bracket
 
 CLEAR = 2.0  # a value below this many errors is not resolved
@@ -40,7 +41,7 @@ def greeks_result(ready: Ready, market: Market, wish: Wish, found: Found) -> Gre
         paths=found.price.paths,
         seconds=found.seconds,
         seed=found.seed,
-        reduction=NO_REDUCTION,
+        reduction=",".join(found.reduction) or NO_REDUCTION,
         interrupted=found.interrupted,
         estimator=wish.estimator,
         bump=wish.bump,
@@ -56,7 +57,8 @@ def greeks_result(ready: Ready, market: Market, wish: Wish, found: Found) -> Gre
         ladder=tuple(_rung(step, assets, contract.size) for step in found.ladder),
         grid=tuple(_point(point, contract.size) for point in found.grid),
         warnings=(*_warnings(found), *implausible(dated, ready.market)),
-        assumptions=tuple(dict.fromkeys((*assumptions(dated, market, ready.market), *CONVENTIONS))),
+        assumptions=tuple(dict.fromkeys(
+            (*standing(ready), *assumptions(dated, market, ready.market), *CONVENTIONS))),
         limits=tuple(limits(dated)),
         cautions=tuple(cautions(dated, named=False)),
         calendar_version=dated.calendar_version,
@@ -71,7 +73,7 @@ CONVENTIONS = (
 
 def _greek(value: Value) -> Greek:
     what, estimate = value.what, value.estimate
-    return Greek(what.name, what.subject, _tenor(what), estimate.value, estimate.standard_error, what.unit,
+    return Greek(what.name, what.subject, _tenor(what), estimate.value, estimate.standard_error, estimate.interval95, what.unit,
                  value.estimator, resolved(estimate), value.note)
 
 

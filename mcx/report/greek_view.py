@@ -29,7 +29,7 @@ def show_greeks(result: GreeksResult, page: Page) -> None:
         ("seed", f"{result.seed}; variance reduction: {result.reduction}; estimator asked for: {result.estimator}"),
     ))
     page.heading("sensitivities (sampling error only)")
-    page.table(("", "value", "error", "unit", "by"), (_row(greek, greek.estimator) for greek in result.greeks), last=2)
+    page.table(("", "value", "error", "unit", "by"), (greek_row(one, one.estimator) for one in result.greeks), last=2)
     if result.refused:
         page.heading("not given")
         said: dict[str, list[str]] = {}
@@ -38,7 +38,7 @@ def show_greeks(result: GreeksResult, page: Page) -> None:
         page.items(f"{', '.join(names)}: {reason}" for reason, names in said.items())
     if result.comparison:
         page.heading("for comparison: revaluation on the same random numbers, biased by the size of the move")
-        page.table(("", "value", "error", "unit", ""), (_row(greek, greek.note) for greek in result.comparison), last=2)
+        page.table(("", "value", "error", "unit", ""), (greek_row(one, one.note) for one in result.comparison), last=2)
     if result.jumps:
         page.heading("the payoff jumps here, or has no bounded slope: no pathwise estimate of the payments behind it")
         page.items(f"{jump.kind} at {jump.place or 'an unnamed place'}" for jump in result.jumps)
@@ -47,7 +47,7 @@ def show_greeks(result: GreeksResult, page: Page) -> None:
         page.heading(f"{named}, same random numbers")
         heads = [f"delta {delta.asset}" for delta in result.ladder[0].deltas]
         page.table(("spot", unit, f"change, {result.currency}", "error", *heads, ""),
-                   (_rung(rung, factor, places) for rung in result.ladder), words=0, last=1)
+                   (rung_row(rung, factor, places) for rung in result.ladder), words=0, last=1)
     if result.grid:
         _grid(result, factor, places, page)
     for title, texts in (("choice of estimators", result.choices), ("warnings", result.warnings),
@@ -58,14 +58,15 @@ def show_greeks(result: GreeksResult, page: Page) -> None:
             page.items(texts)
 
 
-def _row(greek: Greek, words: str) -> tuple[str, ...]:
+def greek_row(greek: Greek, words: str) -> tuple[str, ...]:
+    """A sensitivity with its error, and what is said of it."""
     places = decimals(greek.standard_error, 2, 2)
     said = words if greek.resolved else f"{words}; not resolved"
     name = " ".join(filter(None, (greek.name, greek.asset, greek.tenor)))
     return name, fixed(greek.value, places), fixed(greek.standard_error, places), greek.unit, said
 
 
-def _rung(rung: Rung, factor: float, places: int) -> tuple[str, ...]:
+def rung_row(rung: Rung, factor: float, places: int) -> tuple[str, ...]:
     deltas = (f"{fixed(delta.value, decimals(delta.standard_error, 2, 2))} ± "
               f"{fixed(delta.standard_error, decimals(delta.standard_error, 2, 2))}" for delta in rung.deltas)
     jump = f"{JUMP} above: {', '.join(rung.jumps)}" if rung.jumps else ""

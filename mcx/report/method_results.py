@@ -71,8 +71,10 @@ class MethodsResult(Result):
     closed_form: float | None
     methods: tuple[MethodLine, ...]
     not_applied: tuple[NotApplied, ...]
+    assumptions: tuple[str, ...]
     limits: tuple[str, ...]
     cautions: tuple[str, ...]
+    calendar_version: str
 
 
 @dataclass(frozen=True, slots=True)

@@ -5,16 +5,18 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 
+from mcx.checked.market import Market
 from mcx.estimators.ready import Ready
 from mcx.estimators.reduction.comparison import Compared, closed_form, z_scores
-from mcx.report.cautions import cautions, limits
+from mcx.report.cautions import assumptions, cautions, limits
 from mcx.report.method_results import Convergence, MethodLine, MethodsResult, NotApplied
+from mcx.report.state import standing
 
 BASIS_POINT = 1e-4
 
 
-def methods_result(ready: Ready, found: Sequence[Compared], refused: Sequence[tuple[str, str]], seed: int,
-                   each: str) -> MethodsResult:
+def methods_result(ready: Ready, market: Market, found: Sequence[Compared], refused: Sequence[tuple[str, str]],
+                   seed: int, each: str) -> MethodsResult:
     """Every choice, the most efficient first; an exact one before all."""
     contract = ready.dated.contract
     truth = closed_form(found)
@@ -33,8 +35,10 @@ def methods_result(ready: Ready, found: Sequence[Compared], refused: Sequence[tu
         closed_form=truth,
         methods=tuple(lines),
         not_applied=tuple(NotApplied(*one) for one in refused),
+        assumptions=tuple(dict.fromkeys((*standing(ready), *assumptions(ready.dated, market, ready.market)))),
         limits=tuple(limits(ready.dated)),
         cautions=tuple(cautions(ready.dated, named=False)),
+        calendar_version=ready.dated.calendar_version,
     )
 
 

@@ -26,8 +26,8 @@ def show_methods(result: MethodsResult, page: Page) -> None:
             f"{line.method} {line.z_closed_form:+.2f}" for line in result.methods if line.efficiency is not None))
     noted = [f"{line.method}: {note}" for line in result.methods for note in line.notes]
     refused = [f"{one.method}: {one.reason}" for one in result.not_applied]
-    for title, texts in (("what they found", noted), ("not applicable", refused), ("not in the model", result.limits),
-                         ("read it with care", result.cautions)):
+    for title, texts in (("what they found", noted), ("not applicable", refused), ("assumptions", result.assumptions),
+                         ("not in the model", result.limits), ("read it with care", result.cautions)):
         if texts:
             page.heading(title)
             page.items(texts)

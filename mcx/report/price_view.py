@@ -30,12 +30,12 @@ def show_price(result: PriceResult, page: Page) -> None:
         page.line("interrupted: the estimate so far", style="bold")
     page.line(headline(result), style="bold")
     page.line("± is the half-width of the 95 % interval")
-    page.named(_facts(result, scale))
+    page.named(facts(result, scale))
     page.heading("legs")
-    page.table(("leg", scale.unit, "standard error", result.currency), _amounts(result.legs, result, scale))
+    page.table(("leg", scale.unit, "standard error", result.currency), amounts(result.legs, result, scale))
     if result.parts:
         page.heading("parts")
-        page.table(("part", scale.unit, "standard error", result.currency), _amounts(result.parts, result, scale))
+        page.table(("part", scale.unit, "standard error", result.currency), amounts(result.parts, result, scale))
     if result.owed:
         page.heading("owed already (part of the value)")
         page.table(("paid on", "leg", "fixed on", scale.unit, result.currency, "present value"), (
@@ -56,7 +56,8 @@ def show_price(result: PriceResult, page: Page) -> None:
             page.items(texts)
 
 
-def _facts(result: PriceResult, scale: Scale) -> Iterator[tuple[str, str]]:
+def facts(result: PriceResult, scale: Scale) -> Iterator[tuple[str, str]]:
+    """What stands below the headline: names with what is said of them."""
     places = scale.places(result.standard_error)
     low, high = (scale.show(end, places) for end in result.interval95)
     money = max(decimals(result.value_standard_error, 2, 0), 2) if result.value_standard_error else 2
@@ -96,7 +97,8 @@ def bounds(result: PriceResult | GreeksResult, scale: Scale) -> str:
             f"{bracket.steps} steps instead of {bracket.unrefined} ({bracket.cost:.1f} times the cost of a path)")
 
 
-def _amounts(amounts: Sequence[Amount], result: PriceResult, scale: Scale) -> Iterator[tuple[str, ...]]:
+def amounts(amounts: Sequence[Amount], result: PriceResult, scale: Scale) -> Iterator[tuple[str, ...]]:
+    """Legs or parts as rows, with their sum."""
     places = scale.places(result.standard_error)
     for each in amounts:
         yield (each.name, scale.show(each.price, places), scale.show(each.standard_error, places), fixed(each.value, 2))
@@ -120,14 +122,15 @@ def _probabilities(result: PriceResult, page: Page) -> None:
         shown = result.conditions[first:first + COLUMNS]
         with_ends = bool(result.ends) and first == 0
         heads = ["", *(condition.name for condition in shown), *(["ends here"] if with_ends else [])]
-        page.table(heads, _by_date(shown, result if with_ends else None))
+        page.table(heads, by_date(shown, result if with_ends else None))
     errors = [condition.standard_error for condition in result.conditions]
     errors += [each.standard_error for condition in result.conditions for each in condition.dates]
     errors += [end.standard_error for end in result.ends]
     page.line(f"  standard errors of at most {fixed(100.0 * max(errors), 3)} %")
 
 
-def _by_date(conditions: Sequence[Condition], result: PriceResult | None) -> Iterator[list[str]]:
+def by_date(conditions: Sequence[Condition], result: PriceResult | None) -> Iterator[list[str]]:
+    """Rows of probabilities: ever, on each date, and how often the contract did not end early."""
     ends = {end.date: end.probability for end in result.ends} if result else {}
     columns = [{each.date: each.probability for each in condition.dates} for condition in conditions]
     row = ["ever", *(_chance(condition.probability) for condition in conditions)]

@@ -112,6 +112,7 @@ def show_calendar(result: CalendarView, page: Page) -> None:
     """Everything to come, in order of time."""
     page.table(("date", "contract", "what", "of"), (
         (each.date, each.contract, each.kind, each.of) for each in result.lines), words=4)
+    page.items(f"holidays as listed by {version}" for version in result.calendar_versions)
 
 
 def _path(result: Readback, path: PathResult, page: Page) -> None:

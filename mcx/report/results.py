@@ -10,16 +10,43 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, fields, is_dataclass
+from importlib import import_module
+from typing import TYPE_CHECKING, ClassVar
+
+if TYPE_CHECKING:
+    from pandas import DataFrame
+
+SHOWN_BY = "mcx.report.page.render"  # by name: it knows the results, so they cannot import it
 
 
 class Result:
-    """A frozen record that can say itself as plain data."""
+    """A frozen record that can say itself as plain data, as a table and, in a notebook, with pictures.
+
+    `MAIN` names the field whose entries are the rows of its table; '' makes one row of the record itself.
+    """
 
     __slots__ = ()
+    MAIN: ClassVar[str] = ""
 
     def to_dict(self) -> dict:
         """Plain dicts, lists, texts and numbers, ready for `json.dumps`; what is not a finite number becomes None."""
         return {field.name: plain(getattr(self, field.name)) for field in fields(self)}
+
+    def rows(self) -> list[dict]:
+        """One row for each entry of the main list, of what is no list itself."""
+        found = getattr(self, self.MAIN) if self.MAIN else (self,)
+        rows = map(plain, found)
+        return [{key: value for key, value in row.items() if not isinstance(value, dict | list)} for row in rows]
+
+    def to_frame(self) -> DataFrame:
+        """The rows as a pandas DataFrame; raises ImportError where pandas is not installed."""
+        from pandas import DataFrame
+
+        return DataFrame(self.rows())
+
+    def _repr_html_(self) -> str | None:
+        """What a notebook shows; None leaves it to `repr`."""
+        return import_module(SHOWN_BY).piece(self)
 
 
 def plain(value: object) -> object:
@@ -183,6 +210,7 @@ class PriceResult(Result):
     `assumptions` what was taken as given, `limits` what the model leaves out, `cautions` how the number may be used.
     """
 
+    MAIN: ClassVar[str] = "legs"
     contract: str
     payoff: str
     valuation: str | None
@@ -229,6 +257,7 @@ class PriceTable(Result):
     """Several contracts on one market, in the order of the files; after an interruption `not_valued` are the titles
     of those that were not reached."""
 
+    MAIN: ClassVar[str] = "prices"
     prices: tuple[PriceResult, ...]
     not_valued: tuple[str, ...] = ()
 
@@ -330,6 +359,7 @@ class PathResult(Result):
     """Given levels run through the contract: every payment that is not 0, every named condition, and the date (or
     year) in which the contract ended early, '' if it did not. `notes` say how the levels were taken."""
 
+    MAIN: ClassVar[str] = "payments"
     payments: tuple[Payment, ...]
     total: float
     conditions: tuple[Met, ...]
@@ -343,6 +373,7 @@ class Readback(Result):
     funding) and `market` are empty without a market, `path` None without given levels, `state` (a `StateView`) None
     without a dated market."""
 
+    MAIN: ClassVar[str] = "dates"
     contract: str
     payoff: str
     about: str
@@ -382,6 +413,7 @@ class Definition(Result):
 class Library(Result):
     """The definitions there are: `mcx payoffs`."""
 
+    MAIN: ClassVar[str] = "payoffs"
     payoffs: tuple[Definition, ...]
 
 

@@ -5,15 +5,15 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 from mcx.checked.payoff import Pay
+from mcx.dates.accrual import by_calendar_days, part_passed
 from mcx.dates.dated_contract import DatedContract, Day
-from mcx.dates.day_counts import year_fraction
 from mcx.estimators.ready import Ready
-from mcx.leaves.market_map import MarketMap
+from mcx.leaves.market_map import WEEKLY, MarketMap
 from mcx.report.distances import distances
 from mcx.report.events import event_label
 from mcx.report.results import Owed, Payment, Sentence
 from mcx.report.state_results import Fixed, PastLine, StateView
-from mcx.report.wording import figure
+from mcx.report.wording import figure, joined
 from mcx.tape.state import State
 
 
@@ -33,27 +33,40 @@ def owed_amounts(dated: DatedContract, state: State, market: MarketMap) -> tuple
 
 def accrued(dated: DatedContract, state: State) -> float:
     """Interest of certain coupons in the period that runs on the valuation date, in the unit of the price: the coupon
-    times the part of its period that has passed, by the contract's day count (without one, by calendar days)."""
-    today, count = dated.valuation, dated.contract.day_count
-    total = 0.0
-    for each in state.accruing:
-        since, until = each.since.date, each.occasion.day.date
-        passed = (today - since).days / (until - since).days
-        if count and "ICMA" not in count:
-            passed = year_fraction(count, since, today) / year_fraction(count, since, until)
-        total += each.amount * passed
-    return total
+    times the part of its period that has passed."""
+    return sum((each.amount * part_passed(dated, each.occasion, each.since) for each in state.accruing), 0.0)
 
 
 def standing(ready: Ready) -> Iterator[str]:
-    """Shares that are owed; that a contract has ended, and what is still to come of it."""
+    """What is nearly exact or counted otherwise than the contract says; shares that are owed; that a contract has ended
+    or run out, and what is still to come of it."""
     state = ready.unrolled.state
+    yield from _dividends_watched(ready)
     yield from to_deliver(ready.dated, state)
+    for leg in dict.fromkeys(action.leg for action in state.uncounted):
+        yield (f"how many shares '{leg}' delivers is not fixed yet: fractions are taken to be delivered as well, not "
+               "paid in cash")
+    for why in dict.fromkeys(by_calendar_days(ready.dated, each.occasion) for each in state.accruing):
+        if why:
+            yield f"interest accrues by calendar days: {why}"
     if state.ended is None:
+        last = ready.dated.last_paid
+        if last.time < 0.0:
+            yield f"all dates of the contract have passed, the last of them on {last}: it is worth nothing any more"
         return
     due = [str(each.due) for each in state.payments if each.owed and each.amount]
     left = f"what is owed until {max(due)} is all that it is worth" if due else "nothing is owed any more"
     yield f"the contract ended on {state.ended}, by its fixings: {left}"
+
+
+def _dividends_watched(ready: Ready) -> Iterator[str]:
+    """Assets whose cash dividends make the law of a continuous watch nearly exact, with the longest step."""
+    steps = ready.market.makeup().cash
+    for number, name in enumerate(ready.dated.contract.assets):
+        watches = [note.name for note in ready.unrolled.watches if name in dict(note.sides)]
+        if number in steps and watches:
+            yield (f"in the continuous watch of {joined(watches)} the cash dividends of {name} to come count at their "
+                   f"mean over each step, of at most a {'week' if steps[number] == WEEKLY else 'month'}: nearly exact")
 
 
 def to_deliver(dated: DatedContract, state: State) -> Iterator[str]:

@@ -68,6 +68,8 @@ class CalendarLine(Result):
 
 @dataclass(frozen=True, slots=True)
 class CalendarView(Result):
-    """What comes next of several contracts, in order of time: `mcx readback --calendar`."""
+    """What comes next of several contracts, in order of time: `mcx readback --calendar`. `calendar_versions` are the
+    lists of holidays that the dates depend on, with the version of their package."""
 
     lines: tuple[CalendarLine, ...]
+    calendar_versions: tuple[str, ...]

@@ -165,9 +165,11 @@ class PaymentBounds(Result):
 @dataclass(frozen=True, slots=True)
 class MarginResult(Result):
     """Issue price less our price: in the unit of the price, as a share of the issue price, in currency for the whole
-    trade, and (in the unit of the price) for each year of expected life."""
+    trade, and (in the unit of the price) for each year of expected life. Where the contract has `begun` it is no
+    day-one margin: it holds what happened since."""
 
     issue_price: float
+    begun: bool
     price: float
     standard_error: float
     share: float
@@ -179,8 +181,8 @@ class MarginResult(Result):
 
 @dataclass(frozen=True, slots=True)
 class Money(Result):
-    """Where the value lies. `bond_floor` is the certain minimum of all payments on the issuer's curve, `ceiling` their
-    certain maximum; None where there is none. `parts` and `legs` add up to the price each. `funding` is what the
+    """Where the value lies. `bond_floor` is what all payments are worth at least on the issuer's curve, whatever happens,
+    `ceiling` what at most; None where there is none. `parts` and `legs` add up to the price each. `funding` is what the
     issuer's spread takes off the price, None without one."""
 
     bond_floor: float | None

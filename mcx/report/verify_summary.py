@@ -20,6 +20,7 @@ from mcx.leaves.market_map import MarketMap
 from mcx.report.cautions import assumptions, cautions, limits, vol_warnings
 from mcx.report.model_results import ModelBracketResult, model_bracket_result
 from mcx.report.results import Amount, Planned
+from mcx.report.state import standing
 from mcx.report.summary import NO_REDUCTION
 from mcx.report.verify_results import (
     NO_EFFECT,
@@ -98,7 +99,8 @@ def verify_result(ready: Ready, market: Market, found: Verification, solve: str,
         planned=Planned(plan.asked, plan.paths, plan.pilot_paths, plan.target,
                         None if plan.target is None else price.half_width <= plan.target),
         warnings=(*_warnings(found, market, contract), *vol_warnings(market, ready.market)),
-        assumptions=tuple(dict.fromkeys((*assumptions(dated, market, ready.market), *CONVENTIONS))),
+        assumptions=tuple(dict.fromkeys(
+            (*standing(ready), *assumptions(dated, market, ready.market), *CONVENTIONS))),
         limits=tuple(limits(dated, found.model is not None)),
         cautions=tuple(cautions(dated, named=False)),
         calendar_version=dated.calendar_version,
@@ -238,9 +240,9 @@ def _margin(found: Verification) -> MarginResult | None:
     margin = found.money.margin
     if margin is None:
         return None
-    return MarginResult(found.quote.issue_price, margin.amount.value, margin.amount.standard_error, margin.share.value,
-                        margin.currency.value, margin.currency.standard_error, margin.per_year.value,
-                        margin.per_year.standard_error)
+    return MarginResult(found.quote.issue_price, found.valuation.ready.dated.begun, margin.amount.value,
+                        margin.amount.standard_error, margin.share.value, margin.currency.value,
+                        margin.currency.standard_error, margin.per_year.value, margin.per_year.standard_error)
 
 
 def _solved(solved: Solved) -> Iterator[SolvedTerm]:

@@ -18,13 +18,16 @@ IN_PERCENT = ("vol", "yield", "rates", "funding", "correlation")
 
 def show_verifications(table: VerifyTable, page: Page) -> None:
     """Several quotes: how they rank, then each."""
-    page.heading("on one footing, the highest first")
-    scale = Scale(table.quotes[0])
-    page.table(("", "dealer", "bid", "middle", "ask", "gap", "held", "implied funding"), (
-        (str(each.rank), each.dealer, _or_none(each.bid, scale), scale.show(each.mid, 4), _or_none(each.ask, scale),
-         scale.show(each.gap, 4), ANSWERS[each.explained],
-         "" if each.funding is None else f"{1e4 * each.funding:,.1f} ± {1e4 * each.funding_standard_error:,.1f} bp")
-        for each in table.ranking), words=2)
+    scales = {each.contract: Scale(each) for each in table.quotes}
+    for contract, scale in scales.items():
+        of = f" of {contract}" if len(scales) > 1 else ""
+        page.heading(f"quotes{of} on one footing, the highest first, {scale.unit}")
+        page.table(("", "dealer", "bid", "middle", "ask", "gap", "held", "implied funding"), (
+            (str(each.rank), each.dealer, _or_none(each.bid, scale), scale.show(each.mid, 4),
+             _or_none(each.ask, scale), scale.show(each.gap, 4), ANSWERS[each.explained],
+             "" if each.funding is None else
+             f"{1e4 * each.funding:,.1f} ± {1e4 * each.funding_standard_error:,.1f} bp")
+            for each in table.ranking if each.contract == contract), words=2)
     for each in table.quotes:
         page.line()
         show_verification(each, page)
@@ -71,7 +74,7 @@ def show_verification(result: VerifyResult, page: Page) -> None:
             (each.input, each.asset, _move(each.half_width), scale.show(each.change, places),
              scale.show(each.standard_error, places), each.note) for each in result.inputs), words=2, last=1)
     page.heading("what would have to be true, each input alone")
-    page.table(("input", "", "value", "error", "move", "inside its doubt"), map(_implied, result.implied), words=2,
+    page.table(("input", "", "value", "error", "move", "inside its doubt"), map(implied_row, result.implied), words=2,
                last=1)
     _joint(result, page)
     _readings(result, scale, places, page)
@@ -102,7 +105,8 @@ def _move(share: float) -> str:
     return f"{100.0 * share:.4g} %"
 
 
-def _implied(each: ImpliedInput) -> tuple[str, ...]:
+def implied_row(each: ImpliedInput) -> tuple[str, ...]:
+    """Where an input alone makes the model meet the quote, as words."""
     if each.value is None:
         return each.input, each.asset, "none", "", f"{_signed(each.low)} to {_signed(each.high)}", NO_NUMBER[each.note]
     if each.input in IN_PERCENT:
@@ -160,10 +164,10 @@ def _money(result: VerifyResult, scale: Scale, places: int, page: Page) -> None:
     page.heading("where the money is")
 
     def rows() -> Iterator[tuple[str, str, str]]:
-        yield ("bond floor: certain minimum of all payments",
+        yield ("bond floor: the payments are worth no less than",
                "none" if money.bond_floor is None else scale.show(money.bond_floor, places), "")
         if money.ceiling is not None:
-            yield "certain maximum of all payments", scale.show(money.ceiling, places), ""
+            yield "the payments are worth no more than", scale.show(money.ceiling, places), ""
         for part in money.parts or money.legs:
             yield part.name, scale.show(part.price, places), scale.show(part.standard_error, places)
         yield "our price", scale.show(result.price, places), scale.show(result.standard_error, places)
@@ -172,13 +176,16 @@ def _money(result: VerifyResult, scale: Scale, places: int, page: Page) -> None:
                    scale.show(money.funding_standard_error, places))
         if margin is not None:
             yield "issue price", scale.show(margin.issue_price, places), ""
-            yield "day-one margin", scale.show(margin.price, places), scale.show(margin.standard_error, places)
-            yield ("  for each year of expected life", scale.show(margin.per_year, places),
-                   scale.show(margin.per_year_standard_error, places))
+            name = "issue price less our price (it has begun)" if margin.begun else "day-one margin"
+            yield name, scale.show(margin.price, places), scale.show(margin.standard_error, places)
+            if not margin.begun:
+                yield ("  for each year of expected life", scale.show(margin.per_year, places),
+                       scale.show(margin.per_year_standard_error, places))
 
     page.table(("", scale.unit, "error"), rows())
     if margin is not None:
-        page.line(f"  the margin is {fixed(margin.value, 2)} {result.currency} for the whole trade, "
+        name = "difference" if margin.begun else "margin"
+        page.line(f"  the {name} is {fixed(margin.value, 2)} {result.currency} for the whole trade, "
                   f"{100.0 * margin.share:.2f} % of the issue price; expected life {result.expected_life:.2f} years")
     if 0 < len(money.payments) <= MOST_PAYMENTS:
         page.table(("payment", "decided", "paid", "least", "most"), (

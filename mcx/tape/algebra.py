@@ -26,12 +26,19 @@ class Building(Protocol):
 def _add(tape: Building, x: int, y: int) -> int | None:
     if tape.number(x) == 0.0:
         return y
-    return x if tape.number(y) == 0.0 else None
+    if tape.number(y) == 0.0:
+        return x
+    for one, other in ((x, y), (y, x)):
+        if tape.instructions[one].op is Op.NEG:
+            return tape.emit(Op.SUB, other, *tape.instructions[one].operands)
+    return None
 
 
 def _sub(tape: Building, x: int, y: int) -> int | None:
     if tape.number(y) == 0.0:
         return x
+    if tape.instructions[y].op is Op.NEG:
+        return tape.emit(Op.ADD, x, *tape.instructions[y].operands)
     return tape.emit(Op.NEG, y) if tape.number(x) == 0.0 else None
 
 

@@ -183,14 +183,15 @@ def bridge_moment(d0: Value, d1: Value, half_square: Value, u: Value) -> Value:
     normal, u a uniform.
 
     With T the step and t the moment, t / (T - t) is inverse Gaussian (in the clock of variance) with the mean d0 / d1
-    and the shape d0^2 / variance. Of the two roots that such a normal has, `ratio` is the larger over the mean, and u
-    chooses (Michael, Schucany and Haas, "Generating random variates using transformations with multiple roots", 1976).
+    and the shape d0^2 / variance. Of the two roots that such a normal has, `larger` is the larger over the mean, times
+    d0 d1, and u chooses (Michael, Schucany and Haas, "Generating random variates using transformations with multiple
+    roots", 1976).
     """
     d0, d1 = np.maximum(np.abs(d0), CLOSEST), np.maximum(np.abs(d1), CLOSEST)
-    half = half_square / (d0 * d1)
-    ratio = 1.0 + half + np.sqrt(half * (half + 2.0))
-    small = u * (1.0 + ratio) <= ratio
-    passed, rest = np.where(small, d0, d0 * ratio), np.where(small, d1 * ratio, d1)
+    product = d0 * d1
+    larger = product + half_square + np.sqrt(half_square * (half_square + 2.0 * product))
+    small = u * (product + larger) <= larger
+    passed, rest = np.where(small, d0 * d0, larger), np.where(small, larger, d1 * d1)
     return passed / (passed + rest)
 
 

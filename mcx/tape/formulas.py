@@ -8,7 +8,7 @@ assets, and operations spread the short one over the long one. Numeric terms bec
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass, field
 from typing import TypeAlias
 
@@ -27,7 +27,7 @@ from mcx.checked.formula import (
     Unary,
     walk,
 )
-from mcx.dates.dated_contract import Occasion
+from mcx.dates.dated_contract import Day, Occasion
 from mcx.faults import Fault, Place
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
@@ -43,6 +43,15 @@ class Unreadable(Exception):
     def __init__(self, place: Place, text: str):
         self.fault = Fault(place, text)
         super().__init__(text)
+
+
+class Lacking(Unreadable):
+    """A formula asks for the number of a level term whose fixings are not all known; `levels` are those that are not,
+    by asset and day. No fault of its own: what a tape reads and no fixing gives is found at its end."""
+
+    def __init__(self, place: Place, text: str, levels: Iterable[tuple[int, Day]]):
+        super().__init__(place, text)
+        self.levels = tuple(levels)
 
 
 @dataclass(frozen=True, slots=True)

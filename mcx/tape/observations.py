@@ -7,7 +7,7 @@ code is gone is what is missing.
 from __future__ import annotations
 
 import datetime
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 
 from mcx.dates.dated_contract import DatedContract, Day
 from mcx.faults import Fault
@@ -28,6 +28,7 @@ class Observations:
         self.used: dict[tuple[Day, int], float] = {}  # fixings, by the day they are read for
         self.unstated: dict[str, Fault] = {}  # watches whose past is not known, each with the last day it is read on
         self.asked: dict[LevelKey, datetime.date] = {}  # the past levels that no fixing gives
+        self.sought: set[LevelKey] = set()  # those of which only a number would do, and levels stand in for it
 
     def level(self, asset: int, day: Day) -> int:
         """The level of an asset on a day, as it counts in the contract."""
@@ -50,12 +51,26 @@ class Observations:
         scale = self.history.scale
         return self.builder.emit(Op.MUL, level, self.builder.constant(scale[asset])) if scale else level
 
-    def missing(self, tape: Tape) -> list[Fault]:
-        """One fault for each asset or rate of exchange that lacks fixings, with every date."""
+    def unknown(self, levels: Iterable[tuple[int, Day]], flag: bool) -> int:
+        """What stands for a value that cannot be made without the number of levels, by asset and day, so that the walk
+        goes on and finds all else that is missing: it reads them, and nothing folds that hangs on it."""
+        levels = tuple(levels)
+        for asset, day in levels:
+            fixed = self.history.observed(asset, day)
+            if fixed.date:  # today's level is not missing elsewhere: there it is the spot
+                self.asked[key := LevelKey(asset, fixed.time)] = fixed.date
+                self.sought.add(key)
+        found = self.builder.fold(Op.ADD, [self.level(asset, day) for asset, day in levels])
+        return self.builder.emit(Op.LT, found, self.builder.constant(0.0)) if flag else found
+
+    def missing(self, tape: Tape, given: bool = False) -> list[Fault]:
+        """One fault for each asset or rate of exchange that lacks fixings, with every date; where levels will be
+        `given`, with those alone of which only a number would do."""
+        asked = {key: date for key, date in self.asked.items() if not given or key in self.sought}
         lacking: dict[str, set[datetime.date]] = {}
         for step in tape.instructions:
-            if step.op is Op.LEVEL and step.payload in self.asked:
-                date = self.asked[step.payload]
+            if step.op is Op.LEVEL and step.payload in asked:
+                date = asked[step.payload]
                 for name in self.history.missing(step.payload.asset, date) or [self.assets[step.payload.asset]]:
                     lacking.setdefault(name, set()).add(date)
         return [Fault(self.place, f"'{self.title}' needs a fixing of '{name}' on {_listed(sorted(dates))}")

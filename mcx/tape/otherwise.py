@@ -67,7 +67,7 @@ def unroll_otherwise(
             outputs.append(Output.of("reading", value, other.reading.name))
             outputs.append(Output.of("difference", builder.emit(Op.SUB, value, price.value), other.reading.name))
     together = drop_dead_code(builder.tape(outputs))
-    weighted = weigh(together, fixed_values(together, dated.contract), everything_drawn).tape
+    weighted = weigh(together, fixed_values(together, dated.contract), everything_drawn, makeup.leaders).tape
     wanted = [output for output in weighted.outputs if output.kind != "gap"]
     if unsure := _without_law(weighted, wanted, found):
         kept = [other for other in others if other.reading not in {fault.reading for fault in unsure}]
@@ -106,5 +106,5 @@ def _price(
     price = walk.outputs[0]
     alone = drop_dead_code(builder.tape([price]))
     faults = (walk.faults or unknown_laws(alone, makeup)
-              or conflicts(weigh(alone, fixed_values(alone, dated.contract)).tape))
+              or conflicts(weigh(alone, fixed_values(alone, dated.contract), leaders=makeup.leaders).tape))
     return price.value, [*faults, *walk.observations.unstated.values(), *walk.observations.missing(alone)]

@@ -83,7 +83,8 @@ class Barrier:
 
 class Bound(Enum):
     """Which number stands for the chance that no barrier of several assets is reached within a step, of which only
-    the assets' own chances are known: M. Frechet's bounds (1951), or the chance itself where one asset is watched."""
+    the assets' own chances are known: M. Frechet's bounds (1951), or the chance itself where one asset is watched, or
+    several that move as one."""
 
     EXACT = "exact"
     LOWER = "lower"  # max(0, sum of the chances - (assets - 1))

@@ -8,13 +8,13 @@ cache.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
 from mcx.tape.builder import COMMUTATIVE
 from mcx.tape.ops import OPS, Op
-from mcx.tape.program import ALONE, Program, Tape
+from mcx.tape.program import ALONE, Instruction, Program, Tape
 from mcx.tape.rules import evaluate
 
 
@@ -60,6 +60,7 @@ class _Registers:
 def lower(tape: Tape, leaf_values: Sequence[float] | np.ndarray) -> Program:
     """The program for one set of leaf values, shape (leaves,), in the order of `tape.leaves`."""
     uniform = uniform_values(tape, leaf_values)
+    tape = _chosen(tape, uniform)
     draws = tape.normals + tape.uniforms
     registers = _Registers(draws)
     scalars = _Scalars()
@@ -83,7 +84,7 @@ def lower(tape: Tape, leaf_values: Sequence[float] | np.ndarray) -> Program:
 
     add_up(-1)
     for number, step in enumerate(tape.instructions):
-        if uniform[number] is not None:
+        if uniform[number] is not None or _is_choice(step, uniform):
             continue
         done = set(step.operands)
         if step.op is Op.NORMAL:
@@ -131,9 +132,35 @@ def uniform_values(
             known.append(float(leaves[step.payload]))
         elif step.operands and all(known[k] is not None for k in step.operands):
             known.append(float(evaluate(step.op, *(known[k] for k in step.operands))))
+        elif _is_choice(step, known):
+            known.append(known[_choice(step, known)])
         else:
             known.append(None)
     return known
+
+
+def _is_choice(step: Instruction, uniform: Sequence[float | None]) -> bool:
+    """Whether a choice is the same on every path."""
+    return step.op is Op.SELECT and uniform[step.operands[0]] is not None
+
+
+def _choice(step: Instruction, uniform: Sequence[float | None]) -> int:
+    """What such a choice takes."""
+    return step.operands[1 if uniform[step.operands[0]] else 2]
+
+
+def _chosen(tape: Tape, uniform: Sequence[float | None]) -> Tape:
+    """The tape with what a choice takes read in its place, where that is the same on every path."""
+    same = list(range(len(tape.instructions)))
+    for number, step in enumerate(tape.instructions):
+        if uniform[number] is None and _is_choice(step, uniform):
+            same[number] = same[_choice(step, uniform)]
+    return replace(
+        tape, instructions=tuple(replace(step, operands=tuple(same[k] for k in step.operands))
+                                 for step in tape.instructions) if same != list(range(len(same))) else tape.instructions,
+        outputs=tuple(output.at(same[output.value]) for output in tape.outputs),
+        sums=tuple(replace(each, left=same[each.left], right=None if each.right is None else same[each.right])
+                   for each in tape.sums))
 
 
 def _last_uses(tape: Tape, ready: dict[int, list[int]]) -> list[int]:

@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 import datetime
+from collections.abc import Iterable
 from dataclasses import dataclass
 
 from mcx.checked.formula import Name
 from mcx.checked.payoff import At, Running
 from mcx.dates.dated_contract import Day, Watch
-from mcx.tape.formulas import Formulas, Unreadable, Values
+from mcx.tape.formulas import Formulas, Lacking, Unreadable, Values
 from mcx.tape.observations import Observations
 from mcx.tape.ops import Op
 from mcx.tape.program import Barrier, LevelKey
@@ -78,6 +79,7 @@ class Watched:
         self.barriers: dict[Barrier, None] = {}
         self._extremes: dict[tuple[int, Op], Extreme] = {}
         self._asked = False
+        self.lacking = False  # whether a level term that it is held against lacks fixings
 
     def read(self, asker: Name, day: Day) -> Values:
         running, watch = self.watch.running, self.watch
@@ -98,7 +100,11 @@ class Watched:
         if watch.end.time >= 0.0:
             until = min(time, watch.end.time)
             extremes = Extremes(self.formulas, lambda asset, op: self._extended(asset, op, until))
-            found.append(extremes.read(running.formula, HIGHEST[running.how]))
+            try:
+                found.append(extremes.read(running.formula, HIGHEST[running.how]))
+            except Lacking as trouble:
+                self.lacking = True
+                return (self._unknown(trouble.levels),)
             if not self._extremes:
                 raise Unreadable(running.place, "a continuous watch needs a formula of an asset's level")
         return self._joined(found)
@@ -123,11 +129,13 @@ class Watched:
         """What is known of the past; where that is too little, the fault is noted and the walk goes on, so that all
         that is missing is found at once."""
         try:
-            known = self._known_past(day)
+            return self.formulas.builder.constant(self._known_past(day))
         except Unreadable as trouble:
             self.observations.unstated[self.watch.running.name] = trouble.fault
-            known = 0.0
-        return self.formulas.builder.constant(known)
+            return self._unknown((asset, Day(0.0)) for asset in range(len(self.observations.assets)))
+
+    def _unknown(self, levels: Iterable[tuple[int, Day]]) -> int:
+        return self.observations.unknown(levels, self.watch.running.formula.kind.is_flag)
 
     def _known_past(self, day: Day) -> float:
         """The value over the part of the watch that lies before the valuation date, up to a day."""
@@ -187,7 +195,7 @@ class Watched:
         try:
             running = self.watch.running
             (value,) = Extremes(self.formulas, extreme).read(running.formula, HIGHEST[running.how])
-        except _NoFixings:
+        except (_NoFixings, Lacking):
             return None
         return self.formulas.fixed(value)
 

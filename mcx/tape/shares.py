@@ -31,12 +31,14 @@ class Shares:
 
     def worth(
         self, action: Deliver, day: Day, due: Day, scene: Scene, settled: Callable[[int], int]
-    ) -> tuple[int | None, list[Delivery]]:
-        """The value on `due` (None where that is past) of what is decided on `day`, for each unit of the notional, and
-        the deliveries that are certain. `settled` gives a flag as far as the past has decided it. Raises Unreadable."""
+    ) -> tuple[int | None, list[Delivery], bool]:
+        """The value on `due` (None where that is past) of what is decided on `day`, for each unit of the notional, the
+        deliveries that are certain, and whether all numbers of shares that may be delivered are fixed. `settled` gives
+        a flag as far as the past has decided it. Raises Unreadable."""
         builder, emit = self.formulas.builder, self.formulas.builder.emit
         worth: list[int] = []
         certain: list[Delivery] = []
+        counted = True
         for asset, (shares, chosen) in enumerate(self._each(action, scene)):
             if self.contract.conversion.get(self.contract.assets[asset]) == "quanto":
                 raise Unreadable(action.place, f"'{self.contract.assets[asset]}' {NOT_QUANTO}")
@@ -47,13 +49,14 @@ class Shares:
             if due.time < 0.0:
                 continue
             if number is None:
+                counted &= builder.number(taken) == 0.0
                 value = emit(Op.MUL, shares, self.observations.level(asset, due), place=action.place)
             else:
                 count, rest = (builder.constant(each / self.contract.lot) for each in (whole, fraction))
                 value = emit(Op.ADD, emit(Op.MUL, count, self.observations.level(asset, due)),
                              emit(Op.MUL, rest, self.observations.level(asset, day)))
             worth.append(emit(Op.SELECT, taken, value, builder.constant(0.0), place=action.place))
-        return (builder.fold(Op.ADD, worth, action.place) if worth else None), certain
+        return (builder.fold(Op.ADD, worth, action.place) if worth else None), certain, counted
 
     def _each(self, action: Deliver, scene: Scene) -> list[tuple[int, int]]:
         """For each asset the number of shares, and the flag whether they are delivered."""

@@ -58,7 +58,8 @@ class Accruing:
 class State:
     """The state of a contract on the valuation date. `running` holds values that are known, one or one for each
     asset, `terms` level terms that were observed, `fixings` the levels that were read, by day and asset, as they count;
-    `ended` the day on which it ended, None where it has not."""
+    `ended` the day on which it ended, None where it has not; `uncounted` deliveries of which it is not fixed how many
+    shares they are, so that whole ones cannot be told from fractions."""
 
     events: list[PastEvent] = field(default_factory=list)
     payments: list[FixedAmount] = field(default_factory=list)
@@ -68,6 +69,7 @@ class State:
     ended: Day | None = None
     terms: dict[str, tuple[float, ...]] = field(default_factory=dict)
     fixings: dict[tuple[Day, int], float] = field(default_factory=dict)
+    uncounted: dict[Deliver, None] = field(default_factory=dict)
 
     @property
     def seasoned(self) -> bool:

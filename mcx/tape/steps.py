@@ -38,12 +38,14 @@ class Makeup:
     `cash`: assets with cash dividends to come, whose level is the simulated part plus the escrow, and into how many
     steps a year a watched stretch of theirs is divided at least, since the escrow enters at its mean. `ex`: assets and
     times at which a dividend takes a share of the level. `rates`: for each asset that is converted at the rate of
-    exchange of the day the number of that rate; rates have numbers after those of the assets.
+    exchange of the day the number of that rate; rates have numbers after those of the assets. `leaders`: for each asset
+    whose log always moves by as much as that of one before it, the first such asset: all their bridges are one.
     """
 
     cash: Mapping[int, int] = field(default_factory=dict)
     ex: frozenset[tuple[int, float]] = frozenset()
     rates: Mapping[int, int] = field(default_factory=dict)
+    leaders: Mapping[int, int] = field(default_factory=dict)
 
 
 PLAIN = Makeup()
@@ -71,6 +73,8 @@ def expand_levels(tape: Tape, nodes: Sequence[float], makeup: Makeup = PLAIN, pi
             values.append(walk.moment(step.payload, values[step.operands[0]], step.place))
         elif step.op is Op.LOG and walk.is_later_level(tape.instructions[step.operands[0]]):
             values.append(walk.log_level(tape.instructions[step.operands[0]].payload))
+        elif step.op is Op.LT and _is_inside(tape, *step.operands):
+            values.append(walk.builder.constant(1.0))
         else:
             values.append(walk.builder.copy(step, tuple(values[k] for k in step.operands)))
     outputs = [output.at(values[output.value]) for output in tape.outputs]
@@ -78,6 +82,11 @@ def expand_levels(tape: Tape, nodes: Sequence[float], makeup: Makeup = PLAIN, pi
     normals = walk.steps * len(grid.assets) + (walk.pair is not None)
     made = drop_dead_code(walk.builder.tape(outputs, normals, walk.uniforms))
     return in_order_of_steps(made, walk.step_of) if walk.chances else made, grid
+
+
+def _is_inside(tape: Tape, part: int, end: int) -> bool:
+    """Whether it is asked if a moment comes before the end of its step: one that is drawn always does."""
+    return tape.instructions[part].op is Op.MOMENT and tape.instructions[end].payload == 1.0
 
 
 def grid_times(read: Iterable[LevelKey], watched: Iterable[LevelKey], nodes: Iterable[float]) -> list[float]:
@@ -295,8 +304,10 @@ class _Walk:
         key = (number, barriers, bound)
         if key not in self._unhit:
             emit, fold = self.builder.emit, self.builder.fold
-            assets = sorted({asset for _, asset, _ in barriers})
-            parts = [self._asset_unhit(number, asset, barriers, place) for asset in assets]
+            bridges: dict[int, set[int]] = {}
+            for asset in sorted({asset for _, asset, _ in barriers}):
+                bridges.setdefault(self.makeup.leaders.get(asset, asset), set()).add(asset)
+            parts = [self._bridge_unhit(number, assets, barriers, place) for assets in bridges.values()]
             if bound is not Bound.LOWER:
                 found = fold(Op.MIN, parts)
             elif len(parts) > 1:
@@ -307,25 +318,40 @@ class _Walk:
             self._unhit[key] = found
         return self._unhit[key]
 
-    def _asset_unhit(self, number: int, asset: int, barriers: Sequence[tuple[Op, int, int]], place: Place | None
-                     ) -> int:
-        """The chance that one asset reaches neither its nearest barrier below nor its nearest above in a step."""
+    def _bridge_unhit(self, number: int, assets: Iterable[int], barriers: Sequence[tuple[Op, int, int]],
+                      place: Place | None) -> int:
+        """The chance that the one bridge of some assets reaches neither the nearest barrier below nor the nearest above
+        in a step. Where several assets move as one, their barriers are lines that keep their distance."""
         emit, fold = self.builder.emit, self.builder.fold
-        lows, highs = ([level for op, other, level in barriers if other == asset and op is side]
-                       for side in (Op.LOW, Op.HIGH))
-        low, high = fold(Op.MAX, lows) if lows else None, fold(Op.MIN, highs) if highs else None
-        variance, ends = self._variance(asset, number), self._bridge_ends(asset, number)
-        log_low, log_high = (None if level is None else self._bridge_log(level, asset, number) for level in (low, high))
-        if high is None:
-            chance = emit(Op.BRIDGE_CLEAR, *(emit(Op.SUB, end, log_low) for end in ends), variance)
-        elif low is None:
-            chance = emit(Op.BRIDGE_CLEAR, *(emit(Op.SUB, log_high, end) for end in ends), variance)
-        else:
-            distances = (emit(Op.SUB, end, log_low) for end in ends)
-            chance = emit(Op.BRIDGE_CORRIDOR, *distances, emit(Op.SUB, log_high, log_low), variance)
-        clear = [emit(Op.LT, *pair, place=place) for level in self._beside_the_bridge(asset, number)
-                 for pair in ((low, level), (level, high)) if None not in pair]
+        first, *_ = assets = sorted(assets)
+        below, above, clear = [], [], []  # of each asset: the log of its nearest level and the distances of its ends
+        for asset in assets:
+            lows, highs = ([level for op, other, level in barriers if other == asset and op is side]
+                           for side in (Op.LOW, Op.HIGH))
+            low, high = fold(Op.MAX, lows) if lows else None, fold(Op.MIN, highs) if highs else None
+            ends = self._bridge_ends(asset, number)
+            if low is not None:
+                log = self._bridge_log(low, asset, number)
+                below.append((asset, log, [emit(Op.SUB, end, log) for end in ends]))
+            if high is not None:
+                log = self._bridge_log(high, asset, number)
+                above.append((asset, log, [emit(Op.SUB, log, end) for end in ends]))
+            clear += [emit(Op.LT, *pair, place=place) for level in self._beside_the_bridge(asset, number)
+                      for pair in ((low, level), (level, high)) if None not in pair]
+        distances = [fold(Op.MIN, each) for each in zip(*(found for *_, found in below or above), strict=True)]
+        if below and above:
+            top, bottom = (fold(op, [self._beside(first, asset, log) for asset, log, _ in side])
+                           for op, side in ((Op.MIN, above), (Op.MAX, below)))
+            distances.append(emit(Op.SUB, top, bottom))
+        chance = emit(Op.BRIDGE_CORRIDOR if below and above else Op.BRIDGE_CLEAR, *distances,
+                      self._variance(first, number))
         return emit(Op.SELECT, fold(Op.AND, clear), chance, self.builder.constant(0.0)) if clear else chance
+
+    def _beside(self, leader: int, asset: int, log: int) -> int:
+        """A level of an asset in terms of another that moves as it does."""
+        if asset == leader:
+            return log
+        return self.builder.emit(Op.ADD, self.builder.emit(Op.SUB, log, self.log(asset, 0)), self.log(leader, 0))
 
     def _bridge_log(self, level: int, asset: int, number: int) -> int:
         """Where a level stands for the bridge of a step: without the cash dividends to come, at their mean."""

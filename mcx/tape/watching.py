@@ -14,7 +14,7 @@ from dataclasses import dataclass, replace
 
 from mcx.checked.formula import Binary, Call, Formula, IfElse, Name, OfAsset, Unary, walk
 from mcx.faults import Fault, Place
-from mcx.tape.formulas import Formulas, Scene, Unreadable, Values
+from mcx.tape.formulas import Formulas, Lacking, Scene, Unreadable, Values
 from mcx.tape.ops import Op
 from mcx.tape.program import Barrier, Tape
 from mcx.tape.rules import evaluate
@@ -56,6 +56,8 @@ class Extremes:
             return self.formulas.read(formula, Scene(spot=_not_fixed, running=_not_fixed))
         try:
             shapes = self.shapes.of(formula)
+        except Lacking:
+            raise
         except Unreadable as trouble:
             return self._apart(formula, highest, trouble)
         if all(len(shape.assets) == 1 for shape in shapes):

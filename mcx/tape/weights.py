@@ -10,8 +10,9 @@ extreme enters in any other way is drawn, and so is every flag whose stretch mee
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
+from types import MappingProxyType
 
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
@@ -29,26 +30,29 @@ class Weighted:
 
     bracketed   barriers of several assets that one payment depends on at a time
     drawn       barriers and extremes that are still drawn
+    joined      barriers of several assets that move as one: what one payment depends on at a time is the law of one asset
     """
 
     tape: Tape
     bracketed: frozenset[Barrier]
     drawn: frozenset[Barrier]
+    joined: frozenset[Barrier]
 
 
-def weigh(tape: Tape, fixed: Sequence[float | None], everything_drawn: bool = False) -> Weighted:
+def weigh(tape: Tape, fixed: Sequence[float | None], everything_drawn: bool = False,
+          leaders: Mapping[int, int] = MappingProxyType({})) -> Weighted:
     """The tape with flags as probabilities. `fixed` gives for each value the number that the contract makes it, or
-    None; `everything_drawn` leaves every flag as it is."""
+    None; `everything_drawn` leaves every flag as it is; `leaders` says which assets move as one (`steps.Makeup`)."""
     extremes = frozenset(Barrier(step.op, step.payload) for step in tape.instructions if step.op in (Op.LOW, Op.HIGH))
     drawn = extremes if everything_drawn else frozenset()
     while extremes - drawn:
-        walk = _Walk(tape, fixed, drawn)
+        walk = _Walk(tape, fixed, drawn, leaders)
         walk.along()
         more = walk.drawn | _meeting(walk.drawn, extremes)
         if more == drawn:
             return walk.done()
         drawn = more
-    return Weighted(tape, frozenset(), drawn)
+    return Weighted(tape, frozenset(), drawn, frozenset())
 
 
 def _meeting(drawn: Iterable[Barrier], extremes: Iterable[Barrier]) -> frozenset[Barrier]:
@@ -61,12 +65,14 @@ def _meeting(drawn: Iterable[Barrier], extremes: Iterable[Barrier]) -> frozenset
 class _Walk:
     """One attempt, with some extremes known to be drawn; finds out which others must be."""
 
-    def __init__(self, tape: Tape, fixed: Sequence[float | None], drawn: frozenset[Barrier]):
-        self.tape, self.drawn = tape, drawn
+    def __init__(self, tape: Tape, fixed: Sequence[float | None], drawn: frozenset[Barrier],
+                 leaders: Mapping[int, int]):
+        self.tape, self.drawn, self.leaders = tape, drawn, leaders
         self.builder = Builder()
         self.values: list[Linear] = []
         self.thresholds = Thresholds(tape.instructions, fixed, self.builder, self.values, drawn)
         self.bracketed: set[Barrier] = set()
+        self.joined: set[Barrier] = set()
         self.places = {Barrier(step.op, step.payload): step.place for step in reversed(tape.instructions)
                        if step.op in (Op.LOW, Op.HIGH)}
 
@@ -143,7 +149,7 @@ class _Walk:
                 parts = self._middle(parts, others)
             outputs.append(replace(output, value=self.builder.fold(Op.ADD, parts), flag=False))
         tape = drop_dead_code(self.builder.tape([*outputs, *gaps]))
-        return Weighted(tape, frozenset(self.bracketed), self.drawn)
+        return Weighted(tape, frozenset(self.bracketed), self.drawn, frozenset(self.joined))
 
     def _middle(self, parts: Sequence[int], others: Sequence[int]) -> list[int]:
         """The mean of two sums, still as a sum of payments."""
@@ -162,7 +168,9 @@ class _Walk:
             barriers = tuple(sorted(event, key=lambda pair: pair[0].order))
             if not barriers:
                 parts.append(factor)
-            elif not _together(barrier for barrier, _ in barriers):
+            elif not _together((barrier for barrier, _ in barriers), self.leaders):
+                if _together(barrier for barrier, _ in barriers):
+                    self.joined |= {barrier for barrier, _ in barriers}
                 parts.append(times(self.builder, factor, self._unhit(barriers, Bound.EXACT)))
             else:
                 self.bracketed |= {barrier for barrier, _ in barriers}
@@ -178,9 +186,9 @@ class _Walk:
         return self.builder.keyed(Op.UNHIT, tuple(level for _, level in barriers), payload, place)
 
 
-def _together(barriers: Iterable[Barrier]) -> bool:
-    """Whether barriers of different assets are watched at one time."""
-    stretches = sorted((one.key.start, one.key.time, one.key.asset) for one in barriers)
+def _together(barriers: Iterable[Barrier], leaders: Mapping[int, int] = MappingProxyType({})) -> bool:
+    """Whether barriers of different assets are watched at one time, of assets that do not move as one."""
+    stretches = sorted((one.key.start, one.key.time, leaders.get(one.key.asset, one.key.asset)) for one in barriers)
     latest: dict[int, float] = {}
     for start, end, asset in stretches:
         if any(start < until for other, until in latest.items() if other != asset):

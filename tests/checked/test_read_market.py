@@ -8,6 +8,7 @@ import pytest
 
 from mcx.checked.market import Market, RateConvention
 from mcx.checked.read_market import read_market
+from mcx.leaves.curves import log_curve
 from mcx.text.documents import parse_documents
 
 WHOLE = """\
@@ -91,6 +92,22 @@ def test_the_convention_of_rates():
     assert faults == []
     assert market.rates["EUR"].convention == RateConvention("simple", "Actual/360", date(2026, 12, 1))
     assert parsed(WHOLE)[0].rates["EUR"].convention == RateConvention()
+    market, faults = parsed(WHOLE.replace("{1m: 2.0%, 1y: 2.1%, 2029-12-01: 2.35%}",
+                                          "{zero_rates: {1m: 2.0%, 2y: 2.2%}, compounding: annual}"))
+    assert faults == []  # no day count stated
+    assert market.rates["EUR"].convention == RateConvention("annual", "Actual/365 (Fixed)", date(2026, 12, 1))
+    assert log_curve(market.rates["EUR"]).factor(731 / 365) == pytest.approx(1.022 ** (-731 / 365), rel=1e-14)
+
+
+@pytest.mark.parametrize(("day_count", "found"), [
+    ("Actual/365 (Fixed)", []),
+    ("30/360", ["m.yaml:2:69: expected Actual/365 (Fixed), found '30/360'; a textbook market has no dates"])])
+def test_the_day_count_of_a_textbook_curve(day_count: str, found: list[str]):
+    """Years are years there."""
+    _, faults = parsed("market: 0y\nrates: {EUR: {zero_rates: {1y: 5%}, compounding: annual, "
+                       f"day_count: {day_count}}}}}\n"
+                       "assets: {orchard: {spot: 100, yield: 0%, vol: 25%}}\n")
+    assert faults == found
 
 
 @pytest.mark.parametrize(("written", "fault"), [
@@ -103,6 +120,8 @@ def test_the_convention_of_rates():
      "4:38: expected a compounding: 'continuous', 'annual' or 'simple', found 'monthly'"),
     ("{zero_rates: {1y: 2%}, compounding: annual, day_count: Act/Act (ICMA)}",
      "4:63: expected a day count of curves, found 'Act/Act (ICMA)'; Actual/Actual (ICMA) needs coupon periods"),
+    ("{1y: 2%, compounding: annual}",
+     "4:17: 'compounding' stands beside the rates, not among them: '{zero_rates: {1y: 2.1%}, compounding: annual}'"),
     ("{zero_rates: {3y: -40%}, compounding: simple}",
      "4:26: a simple rate as low as this to '3y' leaves no discount factor above 0"),
 ])
@@ -173,7 +192,7 @@ SLIPS = [
     ("65%}", "65%, lantern/harbour: 65%}",
      "10:37: the correlation of 'lantern' and 'harbour' is given twice"),
     ("yield: 2.4%, ", "",
-     "8:12: 'yield' or 'forwards' is missing in the asset 'harbour'; write 'yield: 0%' for none"),
+     "8:12: 'yield', 'dividends' or 'forwards' is missing in the asset 'harbour'; write 'yield: 0%' for none"),
     ("yield: 2.4%, ", "yield: 2.4%, forwards: {1y: 4200}, ",
      "8:55: the asset 'harbour' has both 'yield' and 'forwards'; keep one"),
     ("4180.2, currency: EUR", "4180.2", "8:12: 'currency' is missing in the asset 'harbour'"),

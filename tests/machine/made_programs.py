@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 
 import numpy as np
 
@@ -10,7 +11,7 @@ from mcx.machine.forward import forward
 from mcx.machine.jit import COMPILED
 from mcx.machine.prepare import prepare
 from mcx.tape.ops import Op
-from mcx.tape.program import Program
+from mcx.tape.program import ALONE, Program
 
 SEED = 8190432761550329847  # of every run in these tests, unless another is wanted
 
@@ -41,6 +42,12 @@ def program(
         rows=rows,
         sums=np.array(sums, dtype=np.int32).reshape(-1, 3),
     )
+
+
+def summed(made: Program) -> Program:
+    """The same program with three sums: of its first output, of its square, and of a number."""
+    return replace(made, sums=np.array([(row, other, len(made.code)) for row, other in (
+        (made.outputs[0], ALONE), (made.outputs[0], made.outputs[0]), (-1, ALONE))], dtype=np.int32))
 
 
 def asian(dates: int, spot: float = 100.0, strike: float = 100.0, rate: float = 0.03, vol: float = 0.2) -> Program:

@@ -9,7 +9,7 @@ import pytest
 from made_programs import SEED, program
 
 from mcx.machine.draw_plan import LEADING, DrawPlan, PathOrder
-from mcx.machine.orders import COMPONENT_STEPS, bridge, components
+from mcx.machine.orders import COMPONENT_STEPS, bridge, components, early_bridge
 from mcx.machine.run import draws
 
 RNG = np.random.default_rng(SEED)
@@ -34,7 +34,7 @@ def matrix(order: PathOrder, normals: int) -> np.ndarray:
     return z
 
 
-@pytest.mark.parametrize("order", [bridge, components])
+@pytest.mark.parametrize("order", [bridge, early_bridge, components])
 @pytest.mark.parametrize("name", CLOCKS)
 def test_an_order_is_orthogonal(name: str, order: Callable):
     """Independent standard normals stay so, whatever the clock, also where an asset stands still."""
@@ -43,7 +43,7 @@ def test_an_order_is_orthogonal(name: str, order: Callable):
     np.testing.assert_allclose(found @ found.T, np.eye(clock.size), atol=1e-14)
 
 
-@pytest.mark.parametrize("order", [bridge, components])
+@pytest.mark.parametrize("order", [bridge, early_bridge, components])
 @pytest.mark.parametrize("name", CLOCKS)
 def test_the_kernel_mixes_as_the_matrix_says(name: str, order: Callable):
     """Normals in an order are the matrix times those of the same points without one, in every lane of several groups."""
@@ -79,6 +79,17 @@ def test_the_bridge_decides_the_end_first(name: str):
         spread = [np.max(np.abs(path[:, k])) for k in range(1, steps)]
         assert np.all(np.diff(spread) < 1e-12)
         assert all(np.array_equal(rows, np.arange(rows[0], rows[-1] + 1)) for rows in reached)
+
+
+def test_an_early_bridge_decides_early_dates_early():
+    """Of 12 even dates the end, then those nearest to halves in the cube root of time: 12 (1/2)^3 is 2 by its root, then
+    between 2 and 12 the 6th, and the 1st."""
+    found = matrix(early_bridge(CLOCKS["even"]), 12)
+    path = np.cumsum(found, axis=0)  # (dates, coordinates)
+    decided = []
+    for k in range(1, 13):  # a date is decided when no later coordinate moves it
+        decided += [date for date in range(1, 13) if date not in decided and np.allclose(path[date - 1, k:], 0.0)]
+    assert decided[:2] == [12, 2] and set(decided[2:4]) == {6, 1}
 
 
 @pytest.mark.parametrize("name", ["two steps", "even", "uneven, three assets", "many"])

@@ -8,7 +8,7 @@ from math import fsum
 
 import numpy as np
 import pytest
-from made_programs import SEED, asian, many, program
+from made_programs import SEED, asian, many, program, summed
 from scipy.special import ndtr
 
 from mcx.machine import jit
@@ -38,12 +38,6 @@ def digits(sums) -> tuple:
     noted = [(snap.paths, snap.mean.tobytes(), snap.m2.tobytes()) for snap in sums.snapshots]
     parts = sums.batch_paths.tobytes(), sums.sums.tobytes()
     return sums.paths, sums.mean.tobytes(), sums.m2.tobytes(), noted, parts
-
-
-def summed(made: Program) -> Program:
-    """The same program with three sums: of its first output, of its square, and of a number."""
-    return replace(made, sums=np.array([(row, other, len(made.code)) for row, other in (
-        (made.outputs[0], ALONE), (made.outputs[0], made.outputs[0]), (-1, ALONE))], dtype=np.int32))
 
 
 def log_above(threshold: float) -> Program:

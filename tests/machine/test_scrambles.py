@@ -2,23 +2,26 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
-from made_programs import SEED, asian, program
+from made_programs import SEED, asian, program, summed
 
 from mcx.machine.draw_plan import SCRAMBLE_BITS, DrawPlan
 from mcx.machine.orders import bridge, components
-from mcx.machine.run import NonFinitePath, ScrambleSums, levels, run, run_scrambles
+from mcx.machine.run import NonFinitePath, NonFiniteSum, ScrambleSums, draws, levels, run, run_scrambles
 from mcx.machine.sizes import cost
 from mcx.tape.ops import Op
+from mcx.tape.program import ALONE
 
-MADE = asian(6)
+MADE = summed(asian(6))
 PLAN = DrawPlan(5, bridge(np.full((6, 1), 0.01)))
 
 
 def digits(sums: ScrambleSums) -> tuple:
     """Everything a run found, to the last bit."""
-    return sums.points, sums.means.tobytes(), sums.squares.tobytes(), sums.interrupted
+    return sums.points, sums.means.tobytes(), sums.squares.tobytes(), sums.sums.tobytes(), sums.interrupted
 
 
 def interrupt(*_: object) -> None:
@@ -34,6 +37,8 @@ def test_each_scramble_is_a_run(points: int):
         alone = run(MADE, seed=SEED, plan=PLAN, paths=points, first_path=scramble << SCRAMBLE_BITS)
         np.testing.assert_array_equal(sums.means[scramble], alone.mean)
         np.testing.assert_array_equal(sums.squares[scramble], alone.m2)
+        np.testing.assert_array_equal(sums.sums[scramble], alone.sums.sum(axis=0))
+    np.testing.assert_allclose(sums.sums[:, 0], points * sums.means[:, 0], rtol=1e-13)
 
 
 @pytest.mark.parametrize("lanes", [64, 192, 1024])
@@ -88,6 +93,17 @@ def test_a_bad_path_is_named():
     scramble, point = divmod(caught.value.path, 1 << SCRAMBLE_BITS)
     before = levels(made, seed=SEED, plan=DrawPlan(9), numbers=np.arange(point) + (scramble << SCRAMBLE_BITS))
     assert np.isfinite(before).all()
+
+
+def test_a_sum_that_is_not_finite_is_named():
+    """By the first of the group's 64 path numbers, in its scramble."""
+    made = program([(Op.SUB, 1, 0, -1), (Op.LOG, 1, 1)], rows=2, outputs=[0], scalars=[-3.2], normals=1)
+    made = replace(made, sums=np.array([(0, ALONE, 2), (1, ALONE, 2)], dtype=np.int32))
+    with pytest.raises(NonFiniteSum) as caught:
+        run_scrambles(made, seed=SEED, plan=DrawPlan(9), points=128)
+    first = caught.value.first_path
+    drawn = draws(made, seed=SEED, plan=DrawPlan(9), numbers=np.arange(64) + first)
+    assert caught.value.sum == 1 and drawn.min() < -3.2 and first >> SCRAMBLE_BITS < 9
 
 
 @pytest.mark.parametrize("number", [5 << SCRAMBLE_BITS, (1 << 64) - 1])

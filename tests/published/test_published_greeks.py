@@ -88,7 +88,7 @@ def paths(spot: float, payoff: str, estimator: str) -> dict[str, np.ndarray]:
 
     found = bound.derivatives(EachPath())
     at = {number.kind: column for column, number in enumerate(inputs(market, made.dated.contract))}
-    return {"price": found.base[:, 0], "delta": found.first[:, at["spot"]], "vega": found.first[:, at["vol"]],
+    return {"price": found.base.means[:, 0], "delta": found.first[:, at["spot"]], "vega": found.first[:, at["vol"]],
             "gamma": found.second[:, 0], "gamma as the slope of a score": found.second[:, 0] - found.controls[:, 0, 4]}
 
 

@@ -76,11 +76,15 @@ def test_watches_with_cash_dividends_are_nearly_exact(tmp_path: Path):
     text = text.replace("{quarry: 1012.40, lantern: 804.50}", "804.50")
     file.write_text(text)
     assert [watch.law for watch in mcx.readback(file).readbacks[0].watches] == ["nearly exact"]
+    said = ("in the continuous watch of hit the cash dividends of lantern to come count at their mean over each step, "
+            "of at most a month: nearly exact")
+    assert said in mcx.price(file, paths=64).prices[0].assumptions
     dividends = "dividends: [{ex: 2027-05-03, cash: 6.0}, {ex: 2028-05-02, cash: 6.5}, {ex: 2029-05-02, cash: 7.0}]"
     plain = text.replace(dividends, "yield: 1%")
     file.write_text(plain)
     assert plain != text
     assert [watch.law for watch in mcx.readback(file).readbacks[0].watches] == ["exact"]
+    assert not any("nearly exact" in each for each in mcx.price(file, paths=64).prices[0].assumptions)
 
 
 @pytest.mark.parametrize("paid", ["cash: 6.0", "share: 3%"])

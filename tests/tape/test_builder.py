@@ -100,6 +100,15 @@ def test_double_negation_vanishes():
     assert tape.emit(Op.SELECT, opposite, x, y) == tape.emit(Op.SELECT, flag, y, x)
 
 
+def test_a_negative_is_subtracted():
+    """x + -y and -y + x are x - y, x - -y is x + y: to the last bit, and one instruction less."""
+    tape = Builder()
+    x, y = tape.input(Op.NORMAL, 0), tape.input(Op.NORMAL, 1)
+    minus = tape.emit(Op.NEG, y)
+    assert tape.emit(Op.ADD, x, minus) == tape.emit(Op.ADD, minus, x) == tape.emit(Op.SUB, x, y)
+    assert tape.emit(Op.SUB, x, minus) == tape.emit(Op.ADD, x, y)
+
+
 def test_zero_times_x_stays():
     """x * 0 is not folded: x may be infinite."""
     tape = Builder()

@@ -41,7 +41,7 @@ def applied(draw: st.DrawFn, op: Op) -> tuple[list[float], list[tuple[float, flo
     values, intervals = [value for value, _ in drawn], [interval for _, interval in drawn]
     if op in (Op.BRIDGE_LOW, Op.BRIDGE_HIGH):
         values[2:], intervals[2:] = [abs(values[2]), 0.3], [(0.0, math.inf), (0.0, 1.0)]
-    if op is Op.BRIDGE_CLEAR:
+    if op in (Op.BRIDGE_CLEAR, Op.BRIDGE_MOMENT):
         values[2], intervals[2] = abs(values[2]), (0.0, math.inf)
     if op is Op.LOOKUP:
         values[0], intervals[0] = abs(values[0]) % 2.0, (0.0, 2.0)

@@ -9,7 +9,7 @@ from strategies import inputs_for, tapes
 from mcx.tape.builder import COMMUTATIVE, Builder
 from mcx.tape.interpret import interpret
 from mcx.tape.ops import OPS, Op
-from mcx.tape.program import Leaf, LeafKind, Output, Program, Tape
+from mcx.tape.program import Leaf, LeafKind, Output, Program, Sum, Tape
 from mcx.tape.registers import lower
 from mcx.tape.rules import evaluate
 
@@ -73,3 +73,18 @@ def test_what_is_the_same_on_every_path_is_computed_once():
     assert program.code.tolist() == [[Op.MUL, 1, 0, -1, 0, 0], [Op.ADD, 2, 1, -1, 0, 0]]
     assert program.scalars.tolist() == [5.0, 2.0]
     assert program.outputs.tolist() == [2, -2]
+
+
+def test_a_choice_that_is_the_same_on_every_path_costs_nothing():
+    """What a leaf decides is read in the choice's place; a taken scalar is a scalar, also in a choice of a choice."""
+    tape = Builder()
+    barrier, x, y = tape.leaf(Leaf(LeafKind.TERM, name="barrier")), *(tape.input(Op.NORMAL, k) for k in (0, 1))
+    flag = tape.emit(Op.LE, barrier, tape.constant(85.0))
+    inner = tape.emit(Op.SELECT, flag, x, tape.emit(Op.EXP, y))
+    outer = tape.emit(Op.SELECT, tape.emit(Op.NOT, flag), inner, tape.constant(3.0))
+    wanted = Sum(tape.emit(Op.MUL, outer, inner), inner)
+    made = tape.tape([Output("price", outer), Output("leg", inner)], normals=2, sums=[wanted])
+    below, above = lower(made, [80.0]), lower(made, [90.0])
+    assert below.code[:, 0].tolist() == [Op.EXP, Op.MUL] and below.scalars[-1 - below.outputs[0]] == 3.0
+    assert below.outputs[1] == 0 and above.code[:, 0].tolist() == [Op.EXP, Op.MUL]
+    assert above.outputs.tolist() == [above.code[0, 1]] * 2 and above.sums[0, 1] == above.outputs[0]

@@ -13,7 +13,7 @@ from mcx.estimators.reduction.scheme import Case, Draft, Method, Stage
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
-from mcx.tape.program import Tape
+from mcx.tape.program import Sum, Tape
 
 
 def change(_: Case, draft: Draft) -> Draft:
@@ -21,15 +21,34 @@ def change(_: Case, draft: Draft) -> Draft:
 
 
 def paired(tape: Tape) -> Tape:
-    """The tape whose outputs and draws are those of `tape`, each output the mean over a path and its mirror.
+    """The tape whose outputs, sums and draws are those of `tape`, each the mean over a path and its mirror.
 
-    Each instruction is followed by its mirror, so that no value has to be kept for long.
+    Each instruction is followed by its mirror, and each sum by its own, so that no value has to be kept for long.
     """
     builder = Builder()
     own: list[int] = []
     mirror: list[int] = []
     centres: list[int | None] = []  # the value less its symmetric part, where it is a sum of normals
-    for step in tape.instructions:
+    half = builder.constant(0.5)
+    ready: dict[int, list[int]] = {}  # sums by the value after which they can be taken
+    for number, part in enumerate(tape.sums):
+        ready.setdefault(max(part.factors), []).append(number)
+    sums: dict[int, Sum] = {}
+
+    def mean(value: int) -> int:
+        if mirror[value] == own[value]:
+            return own[value]
+        return builder.emit(Op.MUL, half, builder.emit(Op.ADD, own[value], mirror[value]))
+
+    def mean_sum(part: Sum) -> Sum:
+        one, *rest = sorted(part.factors, key=lambda k: mirror[k] == own[k])
+        if not rest or mirror[rest[0]] == own[rest[0]]:  # at most one of the factors has a mirror of its own
+            return Sum(mean(one), own[rest[0]] if rest else None)
+        (other,) = rest
+        product = builder.emit(Op.STEP, builder.emit(Op.MUL, own[one], own[other]), mirror[one], mirror[other])
+        return Sum(builder.emit(Op.MUL, half, product))
+
+    for number, step in enumerate(tape.instructions):
         here = builder.copy(step, tuple(own[k] for k in step.operands))
         there = tuple(mirror[k] for k in step.operands)
         centre = None
@@ -41,7 +60,7 @@ def paired(tape: Tape) -> Tape:
             image = centre = here
         elif step.op is Op.STEP and tape.instructions[step.operands[2]].op is Op.NORMAL:
             x, scale, normal = step.operands
-            image = builder.emit(Op.STEP, mirror[x], builder.emit(Op.NEG, own[scale]), own[normal])
+            image = builder.emit(Op.STEP, mirror[x], builder.emit(Op.NEG, mirror[scale]), own[normal])
             centre = centres[x] if mirror[scale] == own[scale] else None
         elif step.op is Op.EXP and centres[step.operands[0]] is not None:
             middle = centres[step.operands[0]]
@@ -55,15 +74,10 @@ def paired(tape: Tape) -> Tape:
         own.append(here)
         mirror.append(image)
         centres.append(centre)
-    half = builder.constant(0.5)
-
-    def mean(value: int) -> int:
-        if mirror[value] == own[value]:
-            return own[value]
-        return builder.emit(Op.MUL, half, builder.emit(Op.ADD, own[value], mirror[value]))
-
+        sums |= {k: mean_sum(tape.sums[k]) for k in ready.get(number, ())}
     outputs = [replace(output, value=mean(output.value), flag=False) for output in tape.outputs]
-    return drop_dead_code(builder.tape(outputs, tape.normals, tape.uniforms))
+    taken = [replace(sums[k], uniform=own[part.uniform] if part.uniform >= 0 else -1) for k, part in enumerate(tape.sums)]
+    return drop_dead_code(builder.tape(outputs, tape.normals, tape.uniforms, taken))
 
 
 ANTITHETIC = Method("antithetic", "each path beside its mirror image", Stage.NORMALS, change)

@@ -22,7 +22,7 @@ from mcx.estimators.reduction.names import NAMES
 from mcx.estimators.reduction.sample import Sampler
 from mcx.estimators.reduction.scheme import Case
 from mcx.faults import Refusal
-from mcx.machine.run import run
+from mcx.machine.run import run, run_scrambles
 
 SEED = 0x3C6EF372FE94F82B
 EXAMPLES = sorted((Path(__file__).resolve().parents[3] / "payoffs" / "examples").glob("*.yaml"))
@@ -107,6 +107,21 @@ class EveryMethod:
             found = [Sampler(scheme_of(Case(ready, SEED, threads), self.names), SEED, threads).sample(5000)
                      for threads in (1, 2)]
         assert found[0] == found[1]
+
+    def test_blocks_change_nothing(self):
+        """However many lanes the kernel takes at once, means and squares are the same, to the last bit."""
+        ready, _ = known(self.calibrated)
+        scheme = self.scheme(ready)
+
+        def digits(lanes: int) -> tuple[bytes, bytes]:
+            how = {"seed": SEED, "plan": scheme.plan, "lanes": lanes, "threads": 1}
+            if scheme.plan.scrambles:
+                sums = run_scrambles(scheme.program, points=192, **how)
+                return sums.means.tobytes(), sums.squares.tobytes()
+            sums = run(scheme.program, paths=100 * 64, **how)
+            return sums.mean.tobytes(), sums.m2.tobytes()
+
+        assert digits(64) == digits(192) == digits(1024)
 
     def test_combines_with_antithetic(self):
         """Unbiased together, or refused with a reason."""

@@ -4,13 +4,18 @@ from __future__ import annotations
 
 import math
 from dataclasses import replace
+from pathlib import Path
 
 import numpy as np
 import pytest
 from test_laws import CURVED, FLAT, made
 
+from mcx.checked.load import load
+from mcx.dates.dating import date_on
+from mcx.estimators.nets import clock
 from mcx.estimators.plan import precision
 from mcx.estimators.price import value
+from mcx.estimators.ready import prepare
 from mcx.estimators.reduction.antithetic import paired
 from mcx.estimators.reduction.catalogue import conflict, scheme_of
 from mcx.estimators.reduction.choice import CHOICES, best
@@ -21,10 +26,12 @@ from mcx.estimators.reduction.sample import Sampler
 from mcx.estimators.reduction.scheme import Case, Control
 from mcx.faults import Refusal, RequestError
 from mcx.machine.draw_plan import DrawPlan
+from mcx.machine.orders import bridge, early_bridge
 from mcx.machine.run import draws
 from mcx.tape.interpret import interpret
 
 SEED = 0x510E527FADE682D1
+EXAMPLES = Path(__file__).resolve().parents[3] / "payoffs" / "examples"
 
 
 @pytest.mark.parametrize(("asked", "names"), [
@@ -124,6 +131,18 @@ def test_strata_share_out_the_end_of_a_path():
     parts = np.floor(64 * ndtr(strata[:, 0])).astype(int).reshape(-1, 64)
     assert (np.sort(parts, axis=1) == np.arange(64)).all()
     np.testing.assert_array_equal(plain[:, 1:], strata[:, 1:])
+
+
+def test_only_a_contract_that_may_end_gets_the_early_bridge():
+    """By the points of an autocall, and of an average."""
+    request = load([EXAMPLES / "autocall.yaml"])
+    dated, _ = date_on(request.contracts[0], request.market)
+    autocall, _ = prepare(dated, request.market)
+    for ready, order in ((autocall, early_bridge), (made("average", FLAT), bridge)):
+        plan = scheme_of(Case(ready, SEED), ("sobol-bridge",)).plan
+        expected = order(clock(ready.market, ready.unrolled.grid))
+        np.testing.assert_array_equal(plan.order.pairs, expected.pairs)
+    assert not np.array_equal(early_bridge(np.full((12, 1), 0.01)).pairs, bridge(np.full((12, 1), 0.01)).pairs)
 
 
 def test_the_choice_beats_plain_sampling_and_is_always_the_same():

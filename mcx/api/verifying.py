@@ -1,0 +1,97 @@
+"""`mcx verify`."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import TYPE_CHECKING
+
+from mcx.api.outputs import check_outputs, write_outputs
+from mcx.api.request import made_ready, read_request
+from mcx.api.sampling import (
+    File,
+    Means,
+    Notice,
+    Progress,
+    Sampling,
+    check_sampling,
+    means_of,
+    plain_only,
+    sampling_of,
+)
+from mcx.checked.load import Request
+from mcx.dates.dated_contract import DatedContract
+from mcx.faults import RequestError
+
+if TYPE_CHECKING:
+    from mcx.report.verify_results import VerifyResult, VerifyTable
+
+
+def verify(
+    *files: File,
+    solve: str = "",
+    target: str | float | None = None,
+    paths: int | None = None,
+    within: str | float | None = None,
+    seconds: float | None = None,
+    seed: int | None = None,
+    threads: int | None = None,
+    reduction: str = "none",
+    record: File | None = None,
+    report: File | None = None,
+    progress: Progress | None = None,
+    notice: Notice | None = None,
+) -> VerifyResult | VerifyTable:
+    """Whether the quotes in the files can be right: one result, or a table of several with their ranking.
+
+    `solve` names a numeric term of the contract, whose values at the quote are found, or at `target` ('99.5%', or money
+    per unit). The other arguments are those of `price`; `within` is about the price. Raises InputError, RequestError,
+    Refusal.
+    """
+    from mcx.estimators.batches import check_paths
+    from mcx.estimators.wishes import check_target, target_of
+
+    sampling = plain_only(sampling_of(paths, within, seconds, seed, reduction))
+    check_paths(sampling.precision.paths)
+    wish = solve, target_of(target)
+    if target is not None and not solve:
+        raise RequestError("'target' is a price to solve a term for; name the term with 'solve'")
+    means = means_of(threads, progress, notice)
+    check_outputs(record, report)
+    made, dated = read_request(files, with_market=True, with_quote=True)
+    check_sampling(sampling, made.contracts)
+    for each in made.contracts:
+        check_target(target, notional=each.notional is not None, title=each.title)
+    count = len(made.quotes)
+    results = verify_all(made, dated, [wish] * count, [sampling] * count, means)
+    write_outputs("verify", files, made, dated, results, record, report)
+    if count == 1:
+        return results[0]
+    from mcx.report.verify_summary import verify_table
+
+    return verify_table(results)
+
+
+def verify_all(
+    made: Request,
+    dated: Sequence[DatedContract],
+    wishes: Sequence[tuple[str, float | None]],
+    samplings: Sequence[Sampling],
+    means: Means,
+) -> list[VerifyResult]:
+    """Every quote against its contract; the quotes of one contract share its paths."""
+    from mcx.estimators.finite import finite
+    from mcx.estimators.verify import Bench
+    from mcx.report.verify_summary import verify_result
+
+    ready = {each.dated.contract.title: each for each in made_ready(made, dated, apart=True)}
+    benches: dict[tuple[str, Sampling], Bench] = {}
+    results = []
+    for quote, wish, sampling in zip(made.quotes, wishes, samplings, strict=True):
+        key = quote.about, sampling
+        with finite(ready[quote.about]):
+            if key not in benches:
+                benches[key] = Bench(ready[quote.about], made.market, sampling.precision, seed=sampling.seed,
+                                     threads=means.threads, progress=means.progress, notice=means.notice)
+            found = benches[key].verify(quote, *wish)
+        results.append(verify_result(ready[quote.about], made.market, found, *wish))
+    return results

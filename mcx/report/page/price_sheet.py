@@ -1,0 +1,103 @@
+"""The sheet of a price."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+from mcx.report.page.blocks import Facts, Notes, Picture, Sheet, Table, cut, notes
+from mcx.report.pictures.draw import Bar, Series, bars, curve, fan, intervals, lines
+from mcx.report.price_view import COLUMNS, PROBABILITIES, Scale, amounts, by_date, facts, headline
+from mcx.report.results import PriceResult
+from mcx.report.scene import Scene
+
+INTERVALS = "Bars reach from 0; the thin lines are 95 % intervals (sampling error only)."
+MOST_ROWS = 14
+
+
+def price_sheet(result: PriceResult, scene: Scene | None) -> Sheet:
+    """Everything that a price says; with its surroundings also pictures of the contract and its inputs."""
+    scale = Scale(result)
+    interrupted = "Interrupted: the estimate so far. " if result.interrupted else ""
+    blocks = [Facts("valuation", tuple(facts(result, scale))), *_legs(result, scale)]
+    blocks += _probabilities(result, scene)
+    blocks += surroundings(scene, scale.unit) if scene else ()
+    blocks += _checks(result, scale)
+    blocks += notes(("warnings", result.warnings), ("assumptions", result.assumptions or ("none",)))
+    blocks += evidence(scene) if scene else ()
+    blocks += notes(("not in the model", result.limits), ("read it with care", result.cautions))
+    return Sheet(result.contract, headline(result), f"{interrupted}± is the half-width of the 95 % interval.",
+                 tuple(blocks))
+
+
+def surroundings(scene: Scene, unit: str) -> Iterator[Picture]:
+    """What the contract would pay, and how far the levels may go."""
+    base = scene.base.replace("_", " ")
+    if scene.profile:
+        low, high = scene.profile[0], scene.profile[-1]
+        across = f"final level, % of {base or 'today'}"
+        said = (f"Undiscounted payments in {unit} where every asset moves along a straight line to one final "
+                f"performance: {low[1]:.4g} at {low[0]:.4g} %, {high[1]:.4g} at {high[0]:.4g} %.")
+        yield Picture("paid in all, by final performance",
+                      curve("paid in all, by final performance", said, scene.profile, across, f"paid, {unit}"), said)
+    for each in scene.fans:
+        shares = sorted(each.quantiles)
+        unit_ = f"% of {base}" if base else "its level"
+        ends = ", ".join(f"{100 * share:g} % below {each.quantiles[share][-1]:.4g}" for share in shares)
+        seen = ", ".join(f"{one.name} from {one.points[0][1]:.4g} to {one.points[-1][1]:.4g}" for one in each.barriers)
+        said = f"Quantiles of {each.name} in the model, {unit_}; at the end {ends}." + (
+            f" The contract looks at: {seen}." if seen else "")
+        yield Picture(f"how far {each.name} may go (risk-neutral, not a forecast)",
+                      fan(f"quantiles of {each.name}", said, each, scene.ticks), said)
+
+
+def evidence(scene: Scene) -> Iterator[Facts | Notes]:
+    """The contract's terms, the inputs, where both were read, and how to find the number again."""
+    yield Facts("terms of the contract", scene.terms)
+    yield Facts("market, as stated", scene.inputs)
+    yield Facts("files and their SHA-256", scene.sources)
+    yield Notes("to repeat it", (scene.command,))
+
+
+def _legs(result: PriceResult, scale: Scale) -> Iterator[Picture | Table]:
+    for title, found in (("legs", result.legs), ("parts", result.parts)):
+        if found:
+            rows = tuple(amounts(found, result, scale))
+            numbers = [(each.price, each.standard_error) for each in found]
+            numbers += [(result.price, result.standard_error)] if len(rows) > len(found) else []
+            drawn = [Bar(row[0], scale.factor * price, scale.factor * error, row[1])
+                     for row, (price, error) in zip(rows, numbers, strict=True)]
+            said = f"In {scale.unit}: " + ", ".join(f"{bar.name} {bar.shown}" for bar in drawn) + "."
+            yield Picture(title, bars(title, said, drawn), INTERVALS)
+            yield Table(f"{title} in numbers", (title[:-1], scale.unit, "standard error", result.currency), rows)
+
+
+def _probabilities(result: PriceResult, scene: Scene | None) -> Iterator[Picture | Table]:
+    if not result.conditions and not result.ends:
+        return
+    shown = result.conditions[:COLUMNS]
+    times = {words: time for time, words in scene.ticks} if scene else {}
+    named = [(each.name, each.dates) for each in shown if len(each.dates) > 1]
+    named += [("ends here", result.ends)] if len(result.ends) > 1 else []
+    series = [Series(name, tuple((times[one.date], 100.0 * one.probability) for one in dates if one.date in times))
+              for name, dates in named]
+    series = list({each.points: each for each in reversed(series) if len(each.points) > 1}.values())[::-1]
+    if series:
+        said = "Percent of paths: " + "; ".join(
+            f"{each.name} from {each.points[0][1]:.3g} to {each.points[-1][1]:.3g}" for each in series) + "."
+        yield Picture(PROBABILITIES, lines("probabilities by date", said, series, scene.ticks), said)
+    rows, left = cut([tuple(row) for row in by_date(shown, result if result.ends else None)], MOST_ROWS)
+    heads = ("", *(each.name for each in shown), *(["ends here"] if result.ends else []))
+    yield Table("probabilities in numbers", heads, rows, note=left)
+
+
+def _checks(result: PriceResult, scale: Scale) -> Iterator[Picture | Table]:
+    stages = [Bar(f"{stage.paths:,} paths", scale.factor * stage.price, scale.factor * stage.standard_error, "")
+              for stage in result.checks.convergence]
+    if len(stages) > 1:
+        said = f"95 % intervals in {scale.unit}: " + ", ".join(
+            f"{stage.name} {stage.value:.6g} ± {1.96 * stage.error:.2g}" for stage in stages) + "."
+        yield Picture("check: price as paths are added", intervals("price as paths are added", said, stages), said)
+    if result.checks.martingale:
+        yield Table("check: mean level over forward", ("asset", "on", "ratio", "standard error", "z"), tuple(
+            (test.asset, test.date, f"{test.mean_over_forward:.6f}", f"{test.standard_error:.6f}", f"{test.z:+.2f}")
+            for test in result.checks.martingale), words=2)

@@ -1,0 +1,42 @@
+"""The command that finds a result again, to the last digit."""
+
+from __future__ import annotations
+
+import shlex
+from collections.abc import Iterator, Sequence
+from pathlib import Path
+
+from mcx.report.greek_results import GreeksResult
+from mcx.report.results import PriceResult
+from mcx.report.verify_results import VerifyResult
+
+
+def command(verb: str, files: Sequence[str | Path], result: PriceResult | GreeksResult | VerifyResult) -> str:
+    """With the number of paths that was drawn, however it was asked for."""
+    words = ["mcx", verb, *map(str, files), "--paths", str(result.paths), "--seed", str(result.seed), "--reduction",
+             result.reduction]
+    return shlex.join([*words, *_more(result)])
+
+
+def _more(result: PriceResult | GreeksResult | VerifyResult) -> Iterator[str]:
+    """What one verb has and the others have not."""
+    if isinstance(result, GreeksResult):
+        yield from _of_greeks(result)
+    elif isinstance(result, VerifyResult) and result.solve:
+        yield from ("--solve", result.solve)
+        yield from () if result.target is None else ("--target", repr(result.target))
+
+
+def _of_greeks(result: GreeksResult) -> Iterator[str]:
+    yield from ("--estimator", result.estimator)
+    if result.bump is not None:
+        yield from ("--bump", repr(result.bump))
+    for asset in result.assets:
+        yield from ("--asset", asset)
+    if result.vol_moves:
+        yield "--grid"
+    elif result.spot_moves:
+        yield "--ladder"
+    for name, moves in (("--spot-moves", result.spot_moves), ("--vol-moves", result.vol_moves)):
+        if moves:
+            yield f"{name}={','.join(map(repr, moves))}"
