@@ -8,6 +8,7 @@ from mcx.report.model_results import ModelBracketResult, StrikeAsset, StrikePric
 from mcx.report.price_scale import Scale
 from mcx.report.terminal import Page
 
+HEADS = ("vols of", "vol")
 MOST_ASSETS = 4  # named in a row; more are in --json
 
 
@@ -24,7 +25,7 @@ def model_line(found: ModelBracketResult, scale: Scale, places: int) -> str:
 def show_model(found: ModelBracketResult, scale: Scale, places: int, page: Page) -> None:
     """The price at the vol of each level, what skew does at jumps, and how far the bracket may be trusted."""
     page.heading("model bracket (apart from sampling and inputs)")
-    page.table(("vols of", "vol", scale.unit, "error"), _rows(found, scale, places), words=1)
+    page.table(HEADS + (scale.unit, "error"), model_rows(found, scale, places), words=1)
     if found.strikes:
         page.line(f"  errors are those of the difference from the headline price, on the same {found.paths:,} paths")
     if found.exact:
@@ -35,7 +36,8 @@ def show_model(found: ModelBracketResult, scale: Scale, places: int, page: Page)
         page.items(found.indicative)
 
 
-def _rows(found: ModelBracketResult, scale: Scale, places: int) -> Iterator[tuple[str, str, str, str]]:
+def model_rows(found: ModelBracketResult, scale: Scale, places: int) -> Iterator[tuple[str, str, str, str]]:
+    """Every price that the bracket spans, under `HEADS`, the unit of the price and 'error'."""
     for one in found.strikes:
         vols = ", ".join(f"{100.0 * each.vol:.2f} %" for each in one.assets[:MOST_ASSETS])
         yield _level(one), vols, scale.show(one.price, places), scale.show(one.difference_standard_error, places)

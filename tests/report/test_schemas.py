@@ -91,11 +91,11 @@ WRONG = {"a mapping": ODD, "a list": Sequence((ODD,), PLACE), "odd text": Scalar
          "nothing": Scalar("", PLACE)}
 BROKEN = {"contract": ("autocall", "seasoned_asian_tail"),
           "quote": ("quoted_note",),
-          "market": ("dividends_and_currencies",), "payoff": ("autocall",)}
+          "market": ("dividends_and_currencies", "vols_by_strike"), "payoff": ("autocall",)}
 
 MEANING = re.compile("there is no|no '.*' here|is not expected here|can be 'per'|behind 'from'|goes by asset|"
                      "no funding|the market has no|no correlation|rate of exchange|needs 'quanto|is not a choice|"
-                     "is no word of|"
+                     "is no word of|the same tenors|"
                      "'given' asks about|is no asset of|the reference spots")
 
 
