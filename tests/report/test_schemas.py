@@ -91,11 +91,11 @@ WRONG = {"a mapping": ODD, "a list": Sequence((ODD,), PLACE), "odd text": Scalar
          "nothing": Scalar("", PLACE)}
 BROKEN = {"contract": ("autocall", "seasoned_asian_tail"),
           "quote": ("quoted_note",),
-          "market": ("dividends_and_currencies", "vols_by_strike"), "payoff": ("autocall",)}
+          "market": ("dividends_and_currencies",), "payoff": ("autocall",)}
 
 MEANING = re.compile("there is no|no '.*' here|is not expected here|can be 'per'|behind 'from'|goes by asset|"
                      "no funding|the market has no|no correlation|rate of exchange|needs 'quanto|is not a choice|"
-                     "is no word of|the same tenors|"
+                     "is no word of|"
                      "'given' asks about|is no asset of|the reference spots")
 
 
@@ -146,6 +146,29 @@ def test_broken_shapes_are_wrong(kind: str):
         assert faults or not marked, f"{where}: {what} loads, but the schema refuses it"
         assert marked or not faults or meant(where, faults), f"{where}: {what}: {faults}"
         both += marked
+    assert both > 30
+
+
+BY_STRIKE = """market: 2026-12-01
+rates: {EUR: 2%}
+assets: {harbour: {spot: 100, currency: EUR, yield: 0%, vol: {strikes: {80%: 25%, 100%: 20%}, priced_at: spot}}}
+"""
+
+
+def test_broken_vols_by_strike_are_wrong():
+    """Schema and loader agree about them too: also where strikes are levels, and where one is no strike."""
+    both = 0
+    for text in (BY_STRIKE, BY_STRIKE.replace("80%:", "80:").replace("100%:", "110.5:"),
+                 BY_STRIKE.replace("80%:", "low:"), BY_STRIKE.replace("80%:", "-80%:"),
+                 BY_STRIKE.replace("80%:", "80 bp:"), BY_STRIKE.replace("priced_at: spot", "priced_at: 90%"),
+                 BY_STRIKE.replace("priced_at: spot", "priced_at: forward")):
+        (document,) = parse_documents(text.encode(), "test.yaml")[0]
+        for where, what, body in [("whole", "as it is", document.body), *broken(document.body)]:
+            if where == "whole" or ".vol" in where:
+                marked = not validator().is_valid(seen(body))
+                faults = [fault.text for fault in checked_request([replace(document, body=body)])[1]]
+                assert marked == bool(faults), f"{where}: {what}: {faults}"
+                both += marked
     assert both > 30
 
 
