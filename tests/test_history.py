@@ -250,7 +250,7 @@ def test_an_extreme_so_far(tmp_path: Path):
         assert 60 < price < so_far
     found = faults(tmp_path, text.replace("HAPPENED", "happened: {low: {2027-06-01: 70}}\n")
                    + "fixings: {harbour: {2027-06-01: 66}}\n")
-    assert "'low' is stated as 70 on 2027-06-01; fixings reach 66" in found[0]
+    assert "'low' is stated as 70 on 2027-06-01, which fixings contradict: harbour was fixed at 66 on 2027-06-01" in found[0]
 
 
 # Disrupted days and corporate actions

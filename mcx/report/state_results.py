@@ -17,6 +17,15 @@ class Fixed(Result):
 
 
 @dataclass(frozen=True, slots=True)
+class StatedLine(Result):
+    """What the contract states of a watch as of the close of a date, as 'yes', 'no' or a level: stated, not computed."""
+
+    date: str
+    what: str
+    value: str
+
+
+@dataclass(frozen=True, slots=True)
 class PastLine(Result):
     """An event of the past, and whether it happened: 'yes', 'no', or "by today's level"."""
 
@@ -46,6 +55,7 @@ class StateView(Result):
     valuation: str
     fixings: tuple[Fixed, ...]
     past: tuple[PastLine, ...]
+    stated: tuple[StatedLine, ...]
     paid: tuple[Payment, ...]
     owed: tuple[Owed, ...]
     to_deliver: tuple[str, ...]

@@ -27,7 +27,7 @@ from mcx.report.results import (
     Stage,
     Width,
 )
-from mcx.report.state import accrued, owed, standing
+from mcx.report.state import accrued, doubted, owed, standing
 
 NO_REDUCTION = "none"
 
@@ -77,7 +77,7 @@ def price_result(ready: Ready, market: Market, valuation: Valuation) -> PriceRes
         ended=str(ready.unrolled.state.ended or ""),
         checks=Checks(martingale, tuple(Stage(e.paths, e.value, e.standard_error) for e in valuation.stages)),
         warnings=(*warnings(valuation, ready.unrolled.tape, martingale, met), *implausible(dated, ready.market),
-                  *vol_warnings(market, ready.market)),
+                  *doubted(dated, ready.unrolled.state, ready.market), *vol_warnings(market, ready.market)),
         assumptions=tuple(dict.fromkeys((*standing(ready), *assumptions(dated, market, ready.market)))),
         limits=tuple(limits(dated, valuation.model is not None)),
         cautions=tuple(cautions(dated, bool(conditions or ends))),

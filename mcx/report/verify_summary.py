@@ -20,7 +20,7 @@ from mcx.leaves.market_map import MarketMap
 from mcx.report.cautions import assumptions, cautions, limits, vol_warnings
 from mcx.report.model_results import ModelBracketResult, model_bracket_result
 from mcx.report.results import Amount, Planned
-from mcx.report.state import standing
+from mcx.report.state import doubted, standing
 from mcx.report.summary import NO_REDUCTION
 from mcx.report.verify_results import (
     NO_EFFECT,
@@ -98,7 +98,8 @@ def verify_result(ready: Ready, market: Market, found: Verification, solve: str,
         target=target,
         planned=Planned(plan.asked, plan.paths, plan.pilot_paths, plan.target,
                         None if plan.target is None else price.half_width <= plan.target),
-        warnings=(*_warnings(found, market, contract), *vol_warnings(market, ready.market)),
+        warnings=(*_warnings(found, market, contract), *doubted(dated, ready.unrolled.state, ready.market),
+                  *vol_warnings(market, ready.market)),
         assumptions=tuple(dict.fromkeys(
             (*standing(ready), *assumptions(dated, market, ready.market), *CONVENTIONS))),
         limits=tuple(limits(dated, found.model is not None)),

@@ -18,12 +18,11 @@ from mcx.dates.dated_contract import DatedContract, DatedHit, Day
 from mcx.faults import Fault
 from mcx.tape.builder import Builder
 from mcx.tape.formulas import Formulas, Scene, Unreadable, Values
-from mcx.tape.linear import ALWAYS, Linear
 from mcx.tape.observations import Observations
 from mcx.tape.ops import Op
 from mcx.tape.program import Leaf, LeafKind, LevelKey
 from mcx.tape.running import Watched
-from mcx.tape.thresholds import Thresholds
+from mcx.tape.thresholds import thresholds_of
 
 YEAR = 365.0  # days, as times are counted
 ROUNDING = 1e-6  # days
@@ -221,7 +220,7 @@ class _Levels:
 
     def __init__(self, formulas: Formulas):
         self.builder: Builder = formulas.builder
-        self._thresholds = Thresholds(self.builder.instructions, _Fixed(formulas), self.builder, _Same())
+        self._thresholds = thresholds_of(formulas)
 
     def of(self, flag: int) -> set[tuple]:
         noted = self._thresholds.extremes
@@ -234,23 +233,6 @@ class _Levels:
         if step.op in (Op.NOT, Op.OR, Op.AND):
             return {pair for operand in step.operands for pair in self.of(operand)}
         return set()
-
-
-@dataclass(frozen=True)
-class _Fixed:
-    """The numbers of the contract behind values, looked up as they are asked for."""
-
-    formulas: Formulas
-
-    def __getitem__(self, value: int) -> float | None:
-        return self.formulas.fixed(value)
-
-
-class _Same:
-    """Every value as it is."""
-
-    def __getitem__(self, value: int) -> Linear:
-        return {ALWAYS: value}
 
 
 def _no_running(name: Name) -> Values:
