@@ -86,7 +86,7 @@ def value(
     if ready.unrolled.bracketed:
         ready, refinement = _refined(ready, asked, seed, threads, pieces)
     case = Case(ready, seed, threads)
-    scheme = best(case) if reduction == (AUTO,) else scheme_of(case, reduction)
+    scheme = best(case, asked) if reduction == (AUTO,) else scheme_of(case, reduction)
     found = sampled(ready, scheme, asked, seed=seed, threads=threads, progress=progress, notice=notice)
     return replace(found, refinement=refinement, hedge=residuals(case) if HEDGE.name in scheme.names else ())
 

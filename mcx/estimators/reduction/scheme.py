@@ -8,6 +8,7 @@ the catalogue, so that they combine by themselves.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from enum import IntEnum
@@ -32,12 +33,14 @@ class Stage(IntEnum):
 
 @dataclass(frozen=True, slots=True)
 class Case:
-    """A contract, and how pilots of it are run."""
+    """A contract, and how pilots of it are run; `most`: what the pilot of a method may cost, in nanoseconds of
+    `machine/sizes.py`."""
 
     ready: Ready
     seed: int
     threads: int | None = None
     notice: Notice | None = None
+    most: float = math.inf
 
     @property
     def title(self) -> str:
