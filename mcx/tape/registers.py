@@ -116,6 +116,9 @@ def lower(tape: Tape, leaf_values: Sequence[float] | np.ndarray) -> Program:
     )
 
 
+READS_LEVELS = frozenset({Op.MOMENT, Op.UNHIT})  # besides their operands
+
+
 def uniform_values(
     tape: Tape, leaf_values: Sequence[float] | np.ndarray, flags: Sequence[float | None] = ()
 ) -> list[float | None]:
@@ -130,7 +133,7 @@ def uniform_values(
             known.append(step.payload)
         elif step.op is Op.LEAF:
             known.append(float(leaves[step.payload]))
-        elif step.operands and all(known[k] is not None for k in step.operands):
+        elif step.operands and step.op not in READS_LEVELS and all(known[k] is not None for k in step.operands):
             known.append(float(evaluate(step.op, *(known[k] for k in step.operands))))
         elif _is_choice(step, known):
             known.append(known[_choice(step, known)])
