@@ -307,7 +307,9 @@ events:
 
 @pytest.mark.parametrize(("old", "new", "assets", "words"), [
     ("", "", "[harbour]", "which of the two comes first is not known"),
-    ("{once: up}\n    then: [{pay: 1}, end]", "{once: out}\n    then: [{pay: 1}]", "[harbour]", "waits for several"),
+    ("{once: up}\n    then: [{pay: 1}, end]", "{once: out}\n    then: [{pay: 1}]", "[harbour]",
+     "'out' waits for the first exit from between two levels, and the law of its moment is not worked out; pay on a "
+     "date whether it came, which is exact ('- {at: expiry, if: out, then: [{pay: 1}]}'), or watch it on dates"),
     (", end]", "]", "[harbour, lantern]", "waits for several"),
 ])
 def test_hits_without_a_law_are_refused(old: str, new: str, assets: str, words: str):
