@@ -1,5 +1,5 @@
-"""Barriers at the spot, beyond it and at the strike, for every kind of watch (those that cross are in `test_watching.py`);
-and the intervals of a price that lies between bounds."""
+"""Barriers at the spot, beyond it and at the strike, for every kind of watch (those that cross each other are in
+`test_watching.py`); and the intervals of a price that lies between bounds."""
 
 from __future__ import annotations
 
@@ -21,15 +21,15 @@ DISCOUNT = exp(-0.04)
 
 
 def barrier(side: str, direction: str, knock: str, strike: float, level: float) -> str:
-    return document("barrier", side=side, direction=direction, knock=knock, strike=strike, barrier=level, watched=ALWAYS,
-                    expiry="1y") + MARKET
+    return document("barrier", side=side, direction=direction, knock=knock, strike=strike, barrier=level,
+                    watched=ALWAYS, expiry="1y") + MARKET
 
 
 @pytest.mark.parametrize("side", ["call", "put"])
 @pytest.mark.parametrize(("direction", "level"), [("down", 100.0), ("down", 110.0), ("up", 100.0), ("up", 90.0)])
 def test_barriers_at_the_spot_or_beyond_it(side: str, direction: str, level: float):
-    """At the spot, and where the spot is beyond it, a barrier is reached at once: out is worth nothing on any path, in is
-    the option itself."""
+    """At the spot, and where the spot is beyond it, a barrier is reached at once: out is worth nothing on any path, in
+    is the option itself."""
     out = price_of(barrier(side, direction, "out", 105.0, level), 4096, SEED)
     assert out.mean == out.error == 0.0
     check(price_of(barrier(side, direction, "in", 105.0, level), 2**18, SEED), european(side, strike=105.0, **FLAT),
@@ -60,8 +60,8 @@ def test_a_barrier_of_the_worst_at_the_spot():
 @pytest.mark.parametrize(("direction", "level"), [("down", 100.0), ("down", 120.0), ("up", 100.0), ("up", 80.0)])
 def test_hits_at_once(direction: str, level: float):
     """An amount paid at the hit is paid today, undiscounted, where the spot is at the barrier or beyond."""
-    found = price_of(document("touch_at_hit", direction=direction, barrier=level, cash=7, watched=ALWAYS) + MARKET, 4096,
-                     SEED)
+    text = document("touch_at_hit", direction=direction, barrier=level, cash=7, watched=ALWAYS)
+    found = price_of(text + MARKET, 4096, SEED)
     assert found.mean == 7.0 and found.error == 0.0
 
 
