@@ -4,7 +4,8 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Iterator
 
-from mcx.report.price_view import Scale
+from mcx.report.model_view import show_model
+from mcx.report.price_scale import Scale
 from mcx.report.terminal import Page, decimals, fixed
 from mcx.report.verify_results import (
     NO_EFFECT,
@@ -68,6 +69,8 @@ def show_verification(result: VerifyResult, page: Page) -> None:
         page.line(f"  sampling error: the gap is z = {gap.z:+.1f} standard errors")
     if result.worst_corner is not None:
         page.line(f"  {corner(result.worst_corner, scale, places)}")
+    if result.model_bracket:
+        show_model(result.model_bracket, scale, places, page)
     if result.inputs:
         page.heading("what each input's half-width does to the price")
         page.table(("input", "", "half-width", scale.unit, "error", ""), (

@@ -94,7 +94,7 @@ def test_whiskers_reach_95_percent():
 
 def test_a_gap_stands_beside_its_bands():
     """The dashed line of the gap runs through a band that holds it, and beside one that does not."""
-    bands = [Rung("wide", 0.8, "yes"), Rung("small", 0.2, "no")]
+    bands = [Rung("wide", -0.8, 0.8, "yes"), Rung("small", -0.2, 0.2, "no")]
     picture = read(gap_ladder("gap", "-0.5", Bar("gap", -0.5, 0.01, "-0.5"), bands, "%"))
     dashed, = [node for node in picture.iter(f"{SVG}polyline") if node.get("stroke-dasharray")]
     end = float(dashed.get("points").split(",")[0])
@@ -134,7 +134,7 @@ def test_long_names_are_cut():
     """Nothing is drawn outside, bars keep their room, and the whole name stands in the words of the picture."""
     rows = [Bar(LONG, 1.0, 0.1, "1.000"), Bar("b", -2.0, 0.1, "-2.000")]
     for svg in (bars("legs", f"{LONG} 1", rows), intervals("price", LONG, rows, "%"), moves("moves", LONG, rows, "%"),
-                gap_ladder("gap", LONG, rows[1], [Rung(LONG, 0.5, "no")], "%"),
+                gap_ladder("gap", LONG, rows[1], [Rung(LONG, -0.5, 0.1, "no")], "%"),
                 lines("chances", LONG, [Series(LONG, ((0.0, 1.0), (1.0, 2.0)))], [(0.0, "today")], "%"),
                 curve("paid", LONG, [(0.5, 0.0), (150.0, 107.6)], "level", "paid", [(f"{LONG} 60", 60.0)])):
         picture = read(svg)

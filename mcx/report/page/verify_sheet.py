@@ -4,10 +4,11 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
+from mcx.estimators.verify import MODEL
 from mcx.report.page.blocks import Facts, Notes, Picture, Sheet, Table, cut, notes
-from mcx.report.page.price_sheet import INTERVALS, evidence, leg_bars, surroundings
+from mcx.report.page.price_sheet import INTERVALS, evidence, leg_bars, model_table, surroundings
 from mcx.report.pictures.draw import Bar, Rung, bars, gap_ladder, moves
-from mcx.report.price_view import Scale
+from mcx.report.price_scale import Scale
 from mcx.report.scene import Scene
 from mcx.report.verify_results import ImpliedInput, VerifyResult
 from mcx.report.verify_view import ANSWERS, IN_PERCENT, MONEY, corner, footed, implied_row, money_rows, solved
@@ -32,7 +33,7 @@ def verify_sheet(result: VerifyResult, scene: Scene | None) -> Sheet:
         *_ladder(result, scale, places)]
     blocks += notes(("what closes it", result.leads))
     blocks += [*_implied(result), *_inputs(result, scale, places), *_readings(result, scale, places),
-               *_footing(result, scale), *_money(result, scale, places)]
+               *model_table(result.model_bracket, scale, places), *_footing(result, scale), *_money(result, scale, places)]
     blocks += surroundings(scene, scale.unit) if scene else ()
     blocks += notes(("warnings", result.warnings), ("assumptions", result.assumptions or ("none",)))
     blocks += evidence(scene) if scene else ()
@@ -42,13 +43,17 @@ def verify_sheet(result: VerifyResult, scene: Scene | None) -> Sheet:
 
 
 def _ladder(result: VerifyResult, scale: Scale, places: int) -> Iterator[Picture | Table]:
-    """The gap against each band; a band that was not stated is in the table only."""
-    bands = [Rung(band.name, scale.factor * band.half_width, ANSWERS[band.holds])
-             for band in result.bands if band.half_width is not None]
+    """The gap against each band, the model bracket where it lies; a band that was not stated is in the table only."""
+    bands = [Rung(band.name, -scale.factor * band.half_width, scale.factor * band.half_width, ANSWERS[band.holds])
+             for band in result.bands if band.half_width is not None and band.name != MODEL]
+    found = result.model_bracket
+    bands += [Rung(band.name, scale.factor * (found.lower - result.price), scale.factor * (found.upper - result.price),
+                   ANSWERS[band.holds]) for band in result.bands
+              if band.name == MODEL and found is not None and found.lower is not None]
     apart, error = scale.factor * result.gap.price, scale.factor * result.gap.standard_error
     shown = scale.show(result.gap.price, places)
     said = f"Gap of {shown} {scale.unit}; " + "; ".join(
-        f"{band.name} ± {band.half:.4g}: holds it: {band.said}" for band in bands) + "."
+        f"{band.name} from {band.low:.4g} to {band.high:.4g}: holds it: {band.said}" for band in bands) + "."
     title = "the gap and what may hold it, each by itself"
     yield Picture(title, gap_ladder(title, said, Bar("gap", apart, error, shown), bands, scale.unit),
                   "The gap is held where its broken line meets the band.")

@@ -45,10 +45,11 @@ class Fan:
 
 @dataclass(frozen=True, slots=True)
 class Rung:
-    """A band around 0 and what is said of it."""
+    """A band about 0, not always evenly, and what is said of it."""
 
     name: str
-    half: float
+    low: float
+    high: float
     said: str
 
 
@@ -157,11 +158,11 @@ def gap_ladder(title: str, said: str, gap: Bar, bands: Sequence[Rung], across: s
     foot = 4 + step * (1 + len(bands))
     canvas = Canvas(WIDTH, foot + BOTTOM + 12, title, said)
     ends = [gap.value - Z95 * gap.error, gap.value + Z95 * gap.error]
-    x = scale([*ends, *(sign * band.half for band in bands for sign in (-1, 1))], left, WIDTH - right, zero=True)
+    x = scale([*ends, *(end for band in bands for end in (band.low, band.high))], left, WIDTH - right, zero=True)
     for number, band in enumerate(bands, start=1):
         y = 4 + step * (number + 0.5)
         canvas.text(left - 8, y + 4, fit(band.name, NAME), "end")
-        canvas.bar(x(-band.half), x(band.half), y, 9)
+        canvas.bar(x(band.low), x(band.high), y, 9)
         canvas.text(WIDTH - 2, y + 4, band.said, "end")
     y = 4 + step * 0.5
     canvas.text(left - 8, y + 4, gap.name, "end")
