@@ -10,7 +10,8 @@ from mcx.report.greek_view import JUMPS, greek_row, move, points, refused, rung_
 from mcx.report.page.blocks import LEFT_OUT, Facts, Picture, Sheet, Table, cut, few, notes
 from mcx.report.page.price_sheet import INTERVALS, evidence, surroundings
 from mcx.report.pictures.draw import Bar, bars, curve
-from mcx.report.price_view import Scale, bounds
+from mcx.report.price_scale import Scale
+from mcx.report.price_view import bounds
 from mcx.report.scene import Scene
 from mcx.report.terminal import decimals, fixed
 

@@ -8,12 +8,12 @@ from mcx.report.model_results import ModelBracketResult
 from mcx.report.model_view import HEADS, model_rows
 from mcx.report.page.blocks import Facts, Notes, Picture, Sheet, Table, cut, notes
 from mcx.report.pictures.draw import Bar, Fan, Series, bars, curve, fan, intervals, lines
+from mcx.report.price_scale import Scale
 from mcx.report.price_view import (
     COLUMNS,
     HEDGE_NOTE,
     HEDGED,
     PROBABILITIES,
-    Scale,
     amounts,
     by_date,
     facts,
