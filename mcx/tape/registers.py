@@ -158,9 +158,11 @@ def _chosen(tape: Tape, uniform: Sequence[float | None]) -> Tape:
     for number, step in enumerate(tape.instructions):
         if uniform[number] is None and _is_choice(step, uniform):
             same[number] = same[_choice(step, uniform)]
+    if same == list(range(len(same))):
+        return tape
     return replace(
         tape, instructions=tuple(replace(step, operands=tuple(same[k] for k in step.operands))
-                                 for step in tape.instructions) if same != list(range(len(same))) else tape.instructions,
+                                 for step in tape.instructions),
         outputs=tuple(output.at(same[output.value]) for output in tape.outputs),
         sums=tuple(replace(each, left=same[each.left], right=None if each.right is None else same[each.right])
                    for each in tape.sums))
