@@ -27,7 +27,8 @@ MOVES = "-5%,-4%,-3%,-2%,-1%,0,1%,2%,3%,4%,5%"  # of a ladder or grid, where non
 
 EXPONENT = re.compile(r"[+-]?[0-9]+(\.[0-9]*)?[eE][+-]?[0-9]{1,2}")
 REPORT = click.option("--report", type=click.Path(), help="Write a page of HTML to this file.")
-PICTURE = click.option("--picture", type=click.Path(), metavar="FILE", help="Draw the page's pictures, as .png or .svg.")
+PICTURE = click.option("--picture", type=click.Path(), metavar="FILE",
+                       help="Draw the pictures of that page, as .png or .svg.")
 FILES = click.argument("files", nargs=-1, required=True, metavar="FILES…")
 AS_JSON = click.option("--json", "as_json", is_flag=True, help="One JSON object, full precision.")
 THREADS = click.option("--threads", type=int, help="Processors to use; changes no digit.  [all]")

@@ -26,8 +26,9 @@ def methods(
 ) -> MethodsResult | MethodsTable:
     """Which variance reduction pays on every contract in the files: one result, or a table of several.
 
-    Every choice of methods that applies runs for `seconds` (1 without), or for `paths`. `report` names a
-    file for a page of HTML, `picture` one (.png or .svg) for its picture, the error against time. Raises InputError, RequestError, Refusal.
+    Every choice of methods that applies runs for `seconds` (1 without), or for `paths`. `report` names a file for a page
+    of HTML, `picture` one (.png or .svg) for its picture, the error against time, of one contract. Raises InputError,
+    RequestError, Refusal.
     """
     asked_for_none = paths is None and seconds is None
     sampling = sampling_of(paths, None, METHOD_SECONDS if asked_for_none else seconds, seed)

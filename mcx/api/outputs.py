@@ -1,4 +1,4 @@
-"""What a verb writes beside its result: a valuation record, a page, pictures. All are checked before the work begins."""
+"""What a verb writes beside its result: a valuation record, a page, pictures; checked before the work begins."""
 
 from __future__ import annotations
 

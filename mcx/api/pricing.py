@@ -36,8 +36,9 @@ def price(
     `seconds` decides the number of paths; without any it is 2^20. `seed` None is 1. `threads` None takes all; it
     changes no digit. `reduction` lists methods of variance reduction, parted by commas ('antithetic,controls'), or is
     'none', or 'auto' for the choice of a short pilot. `record` names a file to write a valuation record to, `report`
-    one for a page of HTML, `picture` one (.png or .svg) for the pictures of that page. `notice` is called with a sentence when kernels must be compiled, or a run will take long.
-    Raises InputError, RequestError, Refusal.
+    one for a page of HTML, `picture` one (.png or .svg) for the pictures of that page, one below the other, of one
+    contract. `notice` is called with a sentence when kernels must be compiled, or a run will take long. Raises
+    InputError, RequestError, Refusal.
     """
     sampling = sampling_of(paths, within, seconds, seed, reduction)
     means = means_of(threads, progress, notice)
@@ -46,7 +47,8 @@ def price(
     check_sampling(sampling, made.contracts)
     check_one(wanted, len(dated), "contract")
     table = price_all(made, dated, [sampling] * len(dated), means)
-    write_outputs("price", files, made, dated, table.prices, replace(wanted, record=None) if table.interrupted else wanted)
+    wanted = replace(wanted, record=None) if table.interrupted else wanted
+    write_outputs("price", files, made, dated, table.prices, wanted)
     return table.prices[0] if len(made.contracts) == 1 else table
 
 

@@ -71,8 +71,8 @@ def greeks(
     _check_assets(wish, made.contracts)
     check_one(wanted, len(dated), "contract")
     table = greeks_of_all(made, dated, [wish] * len(dated), [sampling] * len(dated), means)
-    write_outputs("greeks", files, made, dated, table.contracts,
-                  replace(wanted, record=None) if table.interrupted else wanted)
+    wanted = replace(wanted, record=None) if table.interrupted else wanted
+    write_outputs("greeks", files, made, dated, table.contracts, wanted)
     return table.contracts[0] if len(made.contracts) == 1 else table
 
 

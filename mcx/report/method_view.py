@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
+from mcx.estimators.reduction.names import NONE
 from mcx.report.method_results import MethodLine, MethodsResult
 from mcx.report.terminal import Page, decimals, fixed
 
@@ -31,9 +32,9 @@ def show_methods(result: MethodsResult, page: Page) -> None:
 
 def explained(percent: bool) -> str:
     """What the columns mean."""
-    return ("variance ratio: of plain sampling over this, at equal paths, ± its standard error; cost: time for a path "
-            "over that of plain sampling; efficiency: variance × time of plain sampling over this; z: distance from "
-            "all others pooled; to 1 bp: seconds until the 95 % half-width is 1 bp of the "
+    return ("variance ratio: of plain sampling over this, at equal paths, ± its standard error; cost: processor time "
+            "for a path over that of plain sampling; efficiency: variance × time of plain sampling over this; z: distance "
+            "from all others pooled; to 1 bp: seconds until the 95 % half-width is 1 bp of the "
             + ("notional" if percent else "price"))
 
 
@@ -46,9 +47,10 @@ def found(result: MethodsResult) -> list[str]:
     """What the choices found on their pilots, those that found the same together."""
     said: dict[str, list[str]] = {}
     for line in result.methods:
-        for note in line.notes:
-            said.setdefault(note, []).append(line.method.replace(",", " + "))
-    return [f"{', '.join(methods)}: {note}" for note, methods in said.items()]
+        notes = "; ".join(note.removeprefix(f"{line.method}: ") for note in line.notes)
+        if notes:
+            said.setdefault(notes, []).append(line.method.replace(",", " + "))
+    return [f"{', '.join(methods)}: {notes}" for notes, methods in said.items()]
 
 
 def refused(result: MethodsResult) -> list[str]:
@@ -63,10 +65,11 @@ def method_row(line: MethodLine, factor: float, percent: bool) -> Iterator[str]:
     yield fixed(factor * line.price, places)
     yield f"{error:.2g}" if line.efficiency is not None else "exact"
     yield f"{line.z:+.2f}"
-    yield "" if line.variance_ratio is None else f"{_short(line.variance_ratio)} ± {_short(line.variance_ratio_error)}"
+    yield "" if line.variance_ratio is None else "1" if line.method == NONE else (
+        f"{_short(line.variance_ratio)} ± {_short(line.variance_ratio_error)}")
     yield f"{line.cost_ratio:.2f}"
     yield "" if line.efficiency is None else _short(line.efficiency)
-    yield f"{line.seconds_to_1bp:.2g}"
+    yield "" if line.efficiency is None else f"{line.seconds_to_1bp:.2g}"
 
 
 def _short(number: float) -> str:

@@ -36,8 +36,8 @@ MOST_FANS = 3
 class Scene:
     """The surroundings of one contract's number.
 
-    `base` names the term that levels are measured by ('' where they are not); then fans are in percent of it. `left_out`
-    are assets for whose fans there is no room. `profile` holds (final performance, undiscounted payments), both in
+    `base` names the term that levels are measured by ('' where they are not); then fans are in percent of it.
+    `left_out` are assets for whose fans there is no room. `profile` holds (final performance, undiscounted payments), both in
     percent where there is a base and a notional, `marked` the levels on its scale that the contract looks at last.
     `sources` are files with their SHA-256.
     """

@@ -295,6 +295,49 @@ def test_where_a_page_cannot_be_written(tmp_path: Path):
     assert file.read_text(encoding="utf-8").startswith("<!DOCTYPE html>")
 
 
+# Pictures as files
+
+@pytest.mark.parametrize("verb", VERBS)
+def test_a_picture_file_has_the_pictures_of_the_page(pages: dict[str, Path], verb: str, tmp_path: Path):
+    """The same titles in the same order, and the same words and shapes but for the time that a run took."""
+    note, more, code = VERBS[verb]
+    file = tmp_path / "pictures.svg"
+    assert mcx(verb, note, *more, "--picture", file).code == code
+    parts = ElementTree.parse(file).getroot().findall(f"{SVG}svg")
+    shown = [ElementTree.fromstring(svg) for svg in
+             re.findall(r"<svg.*?</svg>", pages[verb].read_text(encoding="utf-8"), re.DOTALL)]
+    assert [part.findtext(f"{SVG}title") for part in parts] == [each.findtext(f"{SVG}title") for each in shown]
+    for part, each in zip(parts, shown, strict=True) if verb != "methods" else ():
+        assert part.findtext(f"{SVG}desc") == each.findtext(f"{SVG}desc")
+        assert [node.attrib for node in list(part)[2:]] == [node.attrib for node in list(each)[2:]]
+
+
+def test_where_pictures_cannot_be_drawn(tmp_path: Path, monkeypatch: pytest.MonkeyPatch):
+    """Said before the work, with nothing written: another suffix, no folder, a folder, several contracts, no
+    matplotlib for .png, which .svg does without."""
+    for verb, (note, more, code) in VERBS.items():
+        refused(mcx(verb, note, *more, "--picture", tmp_path / "a.pdf"), ".png or .svg, by the suffix")
+        refused(mcx(verb, note, *more, "--picture", tmp_path / "no" / "a.svg"), "there is no folder")
+        (tmp_path / "folder.svg").mkdir(exist_ok=True)
+        refused(mcx(verb, note, *more, "--picture", tmp_path / "folder.svg"), "this is a folder")
+    refused(mcx("price", EXAMPLES / "autocall.yaml", *PATHS, "--picture", tmp_path / "a.svg"),
+            "a picture shows one contract; the files hold 2")
+    monkeypatch.setitem(sys.modules, "matplotlib", None)
+    refused(mcx("price", NOTE, *PATHS, "--picture", tmp_path / "a.png"), "needs the package 'matplotlib'")
+    assert not [file for file in tmp_path.rglob("*") if file.is_file()]
+    assert mcx("price", NOTE, *PATHS, "--picture", tmp_path / "a.svg").code == 0
+
+
+def test_several_contracts_have_their_answers_first(tmp_path: Path):
+    """One table with every contract and its answer, then a sheet for each."""
+    file = tmp_path / "page.html"
+    table = package.price(EXAMPLES / "autocall.yaml", paths=4096, report=file)
+    text = file.read_text(encoding="utf-8")
+    overview = text[text.index('class="overview"'):text.index("<article")]
+    assert all(each.contract in overview for each in table.prices) and overview.count("±") == 2
+    assert text.count("<article") == 2
+
+
 # In a notebook
 
 def test_results_show_themselves():
@@ -370,8 +413,8 @@ def printed(page: Path, folder: Path) -> Seen:
     target, log = folder / "page.pdf", folder / "net.json"
     done = browse(page, folder, "--enable-logging=stderr", "--no-pdf-header-footer", f"--print-to-pdf={target}",
                   f"--log-net-log={log}")
-    asked = frozenset(re.findall(r'"initiator":"(?!not an origin)[^"]*".*?"url":"((?!file:|data:)[^"]+)"',  # not its own
-                                 log.read_text(encoding="utf-8", errors="replace")))
+    of_page = r'"initiator":"(?!not an origin)[^"]*".*?"url":"((?!file:|data:)[^"]+)"'  # the others are the browser's
+    asked = frozenset(re.findall(of_page, log.read_text(encoding="utf-8", errors="replace")))
     return Seen(len(re.findall(rb"/Type\s*/Page\b", target.read_bytes())),
                 tuple(line for line in done.stderr.splitlines() if ":CONSOLE" in line), asked)
 
@@ -386,8 +429,8 @@ def test_in_a_browser(pages: dict[str, Path], verb: str, tmp_path: Path):
 
 @needs_browser
 def test_what_a_page_asks_for_would_be_seen(pages: dict[str, Path], tmp_path: Path):
-    """What somebody adds to a page cannot load or run: the browser says so. Without its policy the request leaves, which
-    the log shows."""
+    """What somebody adds to a page cannot load or run: the browser says so. Without its policy the request leaves,
+    which the log shows."""
     text = pages["price"].read_text(encoding="utf-8")
     added = "<img src='http://example.org/x.png'><script>console.log('ran')</script></main>"
     seen = printed(written(tmp_path, text.replace("</main>", added), "added.html"), tmp_path)
@@ -439,4 +482,5 @@ def test_words_that_meet_would_be_seen(pages: dict[str, Path], tmp_path: Path):
     text = pages["price"].read_text(encoding="utf-8")
     added = '<text x="5" y="30">over</text><text x="5" y="30">another</text><text x="399" y="90">beyond</text></svg>'
     found = measured(written(tmp_path, text.replace("</svg>", added, 1), "added.html"), tmp_path, 1280)["found"]
-    assert any("'over' runs into 'another'" in line for line in found) and any("'beyond' is cut" in line for line in found)
+    for said in ("'over' runs into 'another'", "'beyond' is cut"):
+        assert any(said in line for line in found)

@@ -150,7 +150,8 @@ def test_marks_do_not_cross_names(marked: list[tuple[float, str]]):
     """No line of a mark runs through the name of another: its plate hides none of the names before it."""
     named = [(f"level {name}", place) for place, name in marked]
     picture = read(curve("paid", "0 to 1", [(0.5, 0.0), (150.0, 1.0)], "level", "paid", named))
-    plates = [tuple(float(node.get(key)) for key in ("x", "y", "width", "height")) for node in picture.iter(f"{SVG}rect")]
+    plates = [tuple(float(node.get(key)) for key in ("x", "y", "width", "height"))
+              for node in picture.iter(f"{SVG}rect")]
     assert len(plates) == len(named)
     for number, (x, y, wide, high) in enumerate(plates):
         for x2, y2, wide2, high2 in plates[number + 1:]:
@@ -212,7 +213,8 @@ def test_nothing_of_a_picture_is_outside():
 
 # As files
 
-PICTURES = [("first $x$ <b>", bars("first", "30 and -15", [Bar("a $x$ <b>&", 30.0, 0.5, "30"), Bar("c", -15.0, 0.5, "-15")])),
+ROWS = [Bar("a $x$ <b>&", 30.0, 0.5, "30"), Bar("c", -15.0, 0.5, "-15")]
+PICTURES = [("first $x$ <b>", bars("first", "30 and -15", ROWS)),
             ("second", curve("second", "0 to 1", [(0.5, 0.0), (150.0, 107.6)], "final level", "paid"))]
 
 
@@ -237,7 +239,7 @@ def test_a_png_has_the_same_shapes(tmp_path: Path):
     dots = seen.shape[0] / float(root.get("height"))
     first = root.find("svg")
     for bar in first.iter("rect"):
-        x, y = (float(bar.get(side)) + 0.3 * float(bar.get(length)) for side, length in (("x", "width"), ("y", "height")))
+        x, y = (float(bar.get(side)) + 0.3 * float(bar.get(size)) for side, size in (("x", "width"), ("y", "height")))
         place = int(dots * (y + float(first.get("y")))), int(dots * (x + float(first.get("x"))))
         ink = tuple(int(INKS["fill"][LIGHT][number:number + 2], 16) / 255 for number in (1, 3, 5))
         assert seen[place][:3] == pytest.approx(ink, abs=0.02)

@@ -41,8 +41,8 @@ def greeks_sheet(result: GreeksResult, scene: Scene | None) -> Sheet:
     blocks += evidence(scene) if scene else ()
     blocks += notes(("not in the model", result.limits), ("read it with care", result.cautions))
     interrupted = "Interrupted: the estimates so far. " if result.interrupted else ""
-    return Sheet(result.contract, f"Sensitivities at {price}", f"{interrupted}Errors are those of sampling only. {INTERVALS}",
-                 tuple(blocks))
+    below = f"{interrupted}Errors are those of sampling only. {INTERVALS}"
+    return Sheet(result.contract, f"Sensitivities at {price}", below, tuple(blocks))
 
 
 def _pictures(result: GreeksResult) -> Iterator[Picture]:

@@ -40,16 +40,20 @@ def methods_sheet(result: MethodsResult, scene: Scene | None) -> Sheet:
 
 def _lines(result: MethodsResult, factor: float, unit: str) -> Iterator[Picture]:
     """Each choice's error as its paths are added; not of an exact one, which has none."""
+    drawn = [line for line in result.methods if line.efficiency is not None]
     series = [Series(_plus(line.method), tuple((point.seconds, factor * point.standard_error)
                                                for point in line.convergence
                                                if point.standard_error > 0.0 and point.seconds > 0.0))
-              for line in result.methods if line.efficiency is not None]
+              for line in drawn]
     series = [each for each in series if each.points]
     if series:
+        exact = [_plus(line.method) for line in result.methods if line.efficiency is None]
+        more = f"; exact, and so not drawn: {', '.join(exact)}" if exact else ""
         said = f"Standard error in {unit} after so many seconds: " + "; ".join(
-            f"{each.name} {each.points[-1][1]:.2g} after {each.points[-1][0]:.2g} s" for each in series) + "."
-        yield Picture(TITLE, errors(TITLE, said, series, "seconds", f"standard error, {unit}"),
-                      "Lower and further to the left is better; the errors of short runs are rough themselves.", wide=True)
+            f"{each.name} {each.points[-1][1]:.2g} after {each.points[-1][0]:.2g} s" for each in series) + f"{more}."
+        yield Picture(TITLE, errors(TITLE, said, series, "seconds", f"standard error, {unit}{more}"),
+                      "Lower and further to the left is better; the errors of short runs are rough themselves.",
+                      wide=True)
 
 
 def _plus(method: str) -> str:

@@ -41,8 +41,8 @@ def price_sheet(result: PriceResult, scene: Scene | None) -> Sheet:
     blocks += notes(("warnings", result.warnings), ("assumptions", result.assumptions or ("none",)))
     blocks += evidence(scene) if scene else ()
     blocks += notes(("not in the model", result.limits), ("read it with care", result.cautions))
-    return Sheet(result.contract, headline(result), f"{interrupted}± is the half-width of the 95 % interval. {INTERVALS}",
-                 tuple(blocks))
+    below = f"{interrupted}± is the half-width of the 95 % interval. {INTERVALS}"
+    return Sheet(result.contract, headline(result), below, tuple(blocks))
 
 
 def surroundings(scene: Scene, unit: str) -> Iterator[Picture | Notes]:

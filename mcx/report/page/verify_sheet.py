@@ -33,7 +33,8 @@ def verify_sheet(result: VerifyResult, scene: Scene | None) -> Sheet:
         *_ladder(result, scale, places)]
     blocks += notes(("what closes it", result.leads))
     blocks += [*_implied(result), *_inputs(result, scale, places), *_readings(result, scale, places),
-               *model_table(result.model_bracket, scale, places), *_footing(result, scale), *_money(result, scale, places)]
+               *model_table(result.model_bracket, scale, places), *_footing(result, scale),
+               *_money(result, scale, places)]
     blocks += surroundings(scene, scale.unit) if scene else ()
     blocks += notes(("warnings", result.warnings), ("assumptions", result.assumptions or ("none",)))
     blocks += evidence(scene) if scene else ()
@@ -43,7 +44,7 @@ def verify_sheet(result: VerifyResult, scene: Scene | None) -> Sheet:
 
 
 def _ladder(result: VerifyResult, scale: Scale, places: int) -> Iterator[Picture | Table]:
-    """The gap against each band, the model bracket where it lies; a band that was not stated is in the table only."""
+    """The gap against each band, the model bracket where it lies; one that was not stated is in the table only."""
     bands = [Rung(band.name, -scale.factor * band.half_width, scale.factor * band.half_width, ANSWERS[band.holds])
              for band in result.bands if band.half_width is not None and band.name != MODEL]
     found = result.model_bracket

@@ -214,7 +214,7 @@ def errors(title: str, said: str, series: Sequence[Series], across: str, up: str
         last = each.points[-1]
         canvas.segment(x(last[0]), y(last[1]), WIDE - right, y(last[1]), "grid")
     canvas.labels(WIDE - right, [(y(each.points[-1][1]), each.name, "words") for each in logs], TOP, foot)
-    canvas.text(0, 10, up, kind="soft")
+    canvas.text(0, 10, fit(up, WIDE), kind="soft")
     canvas.text(WIDE - right, height - 4, across, "end", "soft")
     return canvas.svg()
 

@@ -85,8 +85,8 @@ def _read(svg: str) -> ElementTree.Element:
 
 
 def _painted(root: ElementTree.Element) -> bytes:
-    """The shapes of a picture as PNG; letters in a font that comes with matplotlib. What it has no letter for is drawn
-    as a box, of which matplotlib would warn on the standard error for each letter; an SVG leaves letters to its reader."""
+    """The shapes of a picture as PNG, with letters of the font that comes with matplotlib. A letter that it has not is
+    drawn as a box; matplotlib would warn of each. An SVG leaves letters to its reader."""
     from matplotlib.backends.backend_agg import FigureCanvasAgg
     from matplotlib.figure import Figure
 

@@ -22,8 +22,8 @@ INKS = {  # on light paper, on dark paper
 }
 LINES = ("a", "b", "c", "d")
 KINDS = {  # what is drawn: the property that has the ink, and the ink
-    "paper": ("fill", "paper"), "words": ("fill", "ink"), "soft": ("fill", "soft"), "dot": ("fill", "ink"), "bar": ("fill", "fill"),
-    "band": ("fill", "fill"), "grid": ("stroke", "grid"), "axis": ("stroke", "ink"), "error": ("stroke", "ink"),
+    "paper": ("fill", "paper"), "words": ("fill", "ink"), "soft": ("fill", "soft"), "dot": ("fill", "ink"),
+    "bar": ("fill", "fill"), "band": ("fill", "fill"), "grid": ("stroke", "grid"), "axis": ("stroke", "ink"), "error": ("stroke", "ink"),
     "thread": ("stroke", "soft"), **{f"line-{ink}": ("stroke", ink) for ink in LINES},
     **{f"mark-{ink}": ("fill", ink) for ink in LINES},
 }
