@@ -214,6 +214,7 @@ def test_not_touched_so_far(happened: str):
 
 @pytest.mark.parametrize(("happened", "more"), [
     ("{2027-03-04: true}", ""), ("", "fixings: {harbour: {2027-03-04: 79.5}}\n"),
+    ("", "fixings: {harbour: {2026-12-01: 79.5}}\n"),  # on the first day of the watch
     ("{2027-03-01: false, 2027-03-04: true}", "fixings: {harbour: {2027-03-04: 82}}\n")])
 def test_touched_already(happened: str, more: str):
     """By the contract's word, or by a fixing: the cash is certain."""
@@ -222,6 +223,7 @@ def test_touched_already(happened: str, more: str):
 
 
 @pytest.mark.parametrize(("happened", "more", "said"), [
+    ("", "fixings: {harbour: {2026-11-30: 79}}\n", "must say what had happened by 2027-05-31"),  # before the watch
     ("", "", "'touched' is watched all the time from 2026-12-01, which fixings cannot tell; the contract must say "
              "what had happened by 2027-05-31 or 2027-06-01, as 'happened: {touched: {2027-06-01: false}}'"),
     ("{2027-05-28: false}", "", "must say what had happened by 2027-05-31"),
@@ -287,10 +289,22 @@ def test_an_observation_may_be_moved_beyond_the_valuation_date():
 
 def test_a_disrupted_day_must_be_of_the_past_or_move_on(tmp_path: Path):
     """A level of the future is nobody's to state, and time goes one way."""
-    text = WORST_OF.replace("payoff:", "disruption: {lantern: {2027-12-01: 43.5, 2027-06-01: 2027-05-31}}\npayoff:", 1)
-    found = faults(tmp_path, text + market() + fixings(LEVELS))
-    assert any("lies after the valuation date 2027-09-15" in each for each in found)
-    assert any("moved to 2027-05-31; expected a later date" in each for each in found)
+    for later in ("2027-05-31", "2027-06-01"):
+        text = WORST_OF.replace(
+            "payoff:", f"disruption: {{lantern: {{2027-12-01: 43.5, 2027-06-01: {later}}}}}\npayoff:", 1)
+        found = faults(tmp_path, text + market() + fixings(LEVELS))
+        assert any("lies after the valuation date 2027-09-15" in each for each in found)
+        assert any(f"moved to {later}; expected a later date" in each for each in found)
+
+
+def test_a_level_stated_for_the_valuation_date_counts_on_it():
+    """As one of an earlier date would: the coupon is decided by it, not by the spot."""
+    early = {key: level for key, level in LEVELS.items() if key[1] < "2027-09"}
+    for level, paid in ((30.0, False), (47.0, True)):
+        text = WORST_OF.replace(
+            "payoff:", f"disruption: {{lantern: {{2027-09-01: {level}}}, harbour: {{2027-09-01: 95}}}}\npayoff:", 1)
+        state = prepare(text + market("2027-09-01") + fixings(early)).unrolled.state
+        assert any(each.day.date == date(2027, 9, 1) for each in state.payments) == paid
 
 
 def test_a_split_changes_nothing():
@@ -301,6 +315,11 @@ def test_a_split_changes_nothing():
     split = (WORST_OF.replace("payoff:", "adjustments: {lantern: {2027-05-03: 2}}\npayoff:", 1)
              + market().replace("spot: 47", "spot: 23.5") + fixings(halved))
     assert prepare(split).price(4096, SEED).mean == pytest.approx(prepare(plain).price(4096, SEED).mean, rel=1e-12)
+    on_the_day = {key: level / 2 if key[0] == "lantern" and key[1] > "2027-03" else level
+                  for key, level in LEVELS.items()} | {("lantern", "2027-03-01"): LEVELS["lantern", "2027-03-01"] / 2}
+    split = split.replace("2027-05-03: 2}", "2027-03-01: 2}").replace(fixings(halved), fixings(on_the_day))
+    assert prepare(split).price(4096, SEED).mean == pytest.approx(prepare(plain).price(4096, SEED).mean, rel=1e-12)
+    assert coupons(split) == pytest.approx(coupons(plain))
     announced = plain.replace("payoff:", "adjustments: {lantern: {2028-05-03: 2}}\npayoff:", 1)
     assert prepare(announced).price(4096, SEED).mean == prepare(plain).price(4096, SEED).mean
     assert any("not in force yet" in each for each in prepare(announced).dated.assumptions)
