@@ -371,6 +371,14 @@ assets: {harbour: {spot: 100, currency: EUR, yield: 1%, vol: 20%}}
     check(prepare(text).price(1 << 18, SEED), truth, sharp=0.005)
 
 
+def test_a_level_is_known_on_the_day_of_its_last_fixing():
+    """What is decided at that close may read it: the coupon of 2027-03-01 at the mean of two closes, that one too."""
+    text = WORST_OF.replace("{harbour: 100, lantern: 50}", "{average: [2026-12-01, 2027-03-01]}")
+    levels = LEVELS | {("harbour", "2026-12-01"): 102.5, ("lantern", "2026-12-01"): 51.5}
+    state = prepare(text + market() + fixings(levels)).unrolled.state
+    assert state.terms["initial"] == pytest.approx((100.0, 50.0)) and state.payments[0].day.date == date(2027, 3, 1)
+
+
 def test_a_level_is_not_read_before_it_is_fixed(tmp_path: Path):
     """A coupon that needs the initial level stands before its last fixing."""
     text = WORST_OF.replace("{harbour: 100, lantern: 50}", "{average: [2027-03-01, 2028-01-03]}")
@@ -410,10 +418,11 @@ def test_clean_and_dirty(tmp_path: Path):
     assert (today.accrued, [(each.leg, each.amount) for each in today.owed]) == (0.0, [("coupon", 0.03)])
 
 
-def accrued(folder: Path, today: str, start: str, rule: str, count: str) -> float:
+def accrued(folder: Path, today: str, start: str, rule: str, count: str, roll: str = "following") -> float:
     """Interest of a rate of 12 % that has accrued in a contract from `start` with coupons by a rule."""
     text = COUPONS.replace("NAME", "reverse_convertible").replace("DENOM", "").replace("TODAY", today)
-    text = text.replace("30/360", count).replace("start: 2026-12-01", f"start: {start}")
+    text = text.replace("30/360", count).replace("start: 2026-12-01", f"start: {start}").replace(
+        "roll: following", f"roll: {roll}")
     text = text.replace("{from: 2027-03-01, until: 2027-12-01, every: 3 months}", rule)
     text = text.replace("final: 2027-11-24", "final: coupon_dates.last")
     return package.price(written(folder, text), paths=64).accrued
@@ -433,6 +442,24 @@ def test_interest_accrues_by_regular_periods(tmp_path: Path, today: str, start: 
     """Actual/Actual (ICMA), Rule 251: days over those of the regular period. The periods are those of the examples of
     ISDA (1998), EMU and Market Conventions: Recent Developments (from memory), the days counted by hand."""
     assert accrued(tmp_path, today, start, rule, "Actual/Actual (ICMA)") == pytest.approx(0.12 * part, rel=1e-14)
+
+
+def test_no_interest_before_the_first_day_of_a_period(tmp_path: Path):
+    """2003-11-01 is a Saturday and rolls back to the Friday: on that day the new period has not begun, by the rule."""
+    rule = "{from: 2003-11-01, until: 2004-11-01, every: 6 months}"
+    assert accrued(tmp_path, "2003-10-31", "2003-05-01", rule, "Actual/Actual (ICMA)", roll="preceding") == 0.0
+
+
+def test_interest_on_a_part_of_a_rule(tmp_path: Path):
+    """Coupons on all dates of a rule but its first: 101 of the 182 days from 2003-11-01, the second of them."""
+    text = COUPONS.replace("DENOM", "").replace("TODAY", "2004-02-10").replace("30/360", "Actual/Actual (ICMA)")
+    head = text[:text.index("payoff:")].replace("start: 2026-12-01", "start: 2003-05-01")
+    own = ("payoff: part\nterms: {listed: {type: dates}, paid: {type: dates}}\nevents:\n"
+           "  - {at: paid, pay: 12% * period, part: coupon}\n---\n")
+    terms = ("payoff: part\nterms: {listed: {from: 2003-05-01, until: 2004-11-01, every: 6 months}, "
+             "paid: listed.but_first}\n")
+    result = package.price(written(tmp_path, own + head + terms + text[text.index("---"):]), paths=64)
+    assert result.accrued == pytest.approx(0.12 * 0.5 * 101 / 182, rel=1e-14)
 
 
 def test_interest_of_the_last_period_keeps_the_end_of_february(tmp_path: Path):
@@ -499,8 +526,8 @@ def test_a_number_of_shares_that_is_still_to_come(tmp_path: Path):
     text = COUPONS.replace("NAME", "share_reverse_convertible").replace("DENOM", "denomination: 250\n").replace(
         "initial: 100", "initial: {average: [2026-12-01, 2026-12-02]}")
     fixed = "fixings: {harbour: {2026-12-01: 98, 2026-12-02: 102}}\n"
-    said = ("how many shares 'shares' delivers is not fixed yet: fractions are taken to be delivered as well, not paid in "
-            "cash")
+    said = ("how many shares 'shares' delivers is not fixed yet: fractions are taken to be delivered as well, not paid "
+            "in cash")
     before = package.price(written(tmp_path, text.replace("TODAY", "2026-12-01")), paths=1 << 14)
     assert said in before.assumptions
     after = package.price(written(tmp_path, text.replace("TODAY", "2026-12-03") + fixed), paths=256)
