@@ -5,28 +5,13 @@ from __future__ import annotations
 from collections.abc import Iterator, Sequence
 
 from mcx.report.greek_results import GreeksResult
+from mcx.report.model_view import model_line, show_model
+from mcx.report.price_scale import Scale
 from mcx.report.results import Amount, Condition, PriceResult, PriceTable
 from mcx.report.terminal import Page, decimals, fixed
 
 COLUMNS = 4  # conditions beside one another in the table by date
 PROBABILITIES = "probabilities (risk-neutral, not a forecast)"
-
-
-class Scale:
-    """How prices are shown: percent of the notional, or money per unit."""
-
-    def __init__(self, result: PriceResult | GreeksResult):
-        self.percent = result.notional is not None
-        self.factor = 100.0 if self.percent else 1.0
-        self.sign = " %" if self.percent else ""
-        self.unit = "%" if self.percent else f"{result.currency} per unit"
-        self.fewest = 2 if self.percent else 4
-
-    def show(self, number: float, places: int) -> str:
-        return fixed(number * self.factor, places)
-
-    def places(self, error: float, digits: int = 2) -> int:
-        return decimals(error * self.factor, digits, self.fewest)
 
 
 def headline(result: PriceResult) -> str:
@@ -61,6 +46,8 @@ def show_price(result: PriceResult, page: Page) -> None:
     if result.conditions or result.ends:
         page.heading(PROBABILITIES)
         _probabilities(result, page)
+    if result.model_bracket:
+        show_model(result.model_bracket, scale, scale.places(result.standard_error), page)
     _checks(result, scale, page)
     for title, texts in (("warnings", result.warnings), ("assumptions", result.assumptions or ("none",)),
                          ("not in the model", result.limits), ("read it with care", result.cautions)):
@@ -88,6 +75,8 @@ def facts(result: PriceResult, scale: Scale) -> Iterator[tuple[str, str]]:
     yield "95 % interval", f"{low} to {high}{scale.sign}"
     if result.bracket:
         yield "bounds", bounds(result, scale)
+    if result.model_bracket:
+        yield "model bracket", model_line(result.model_bracket, scale, places)
     yield "paths", f"{result.paths:,} in {result.seconds:.2f} s; asked for: {result.planned.asked}"
     yield "seed", f"{result.seed}; variance reduction: {result.reduction}"
     for number, note in enumerate(result.reduction_notes):
@@ -186,6 +175,10 @@ def show_prices(table: PriceTable, page: Page) -> None:
     for each in table.prices:
         if each.bracket:
             page.line(f"{each.contract}: {bounds(each, Scale(each))}")
+        if each.model_bracket:
+            scale = Scale(each)
+            line = model_line(each.model_bracket, scale, scale.places(each.standard_error))
+            page.line(f"{each.contract}: model bracket {line}")
     if table.not_valued:
         page.line(f"not valued: {', '.join(table.not_valued)}")
     first = table.prices[0]

@@ -199,9 +199,10 @@ class PriceResult(Result):
     """What a contract is worth: `mcx price`.
 
     `notional` or `units` is None. `bracket` is None but where the price is the middle of two bounds; `interval95` is
-    about sampling alone. `valuation` is None for textbook markets. `ends` holds how often the contract ended
-    early on each date, `reached_maturity` how often it did not, and `expected_life` the years to the payment that ends
-    it. `reduction` lists the methods of variance reduction, 'none' without, `reduction_notes` what they found;
+    about sampling alone. `model_bracket` (a `ModelBracketResult`) is None but where vols are given by strike.
+    `valuation` is None for textbook markets. `ends` holds how often the contract ended early on each date,
+    `reached_maturity` how often it did not, and `expected_life` the years to the payment that ends it. `reduction`
+    lists the methods of variance reduction, 'none' without, `reduction_notes` what they found;
     `paths` counts both paths of a pair. `hedge` is empty unless gains of a hedge are among the methods. `owed` are
     amounts that fixings have settled and that are not yet paid; they are part of the price, which is dirty: `accrued` is
     the interest of certain coupons in their running period, and `clean` the price less that. `ended` is the date on which
@@ -221,6 +222,7 @@ class PriceResult(Result):
     standard_error: float
     interval95: tuple[float, float]
     bracket: Bracket | None
+    model_bracket: Result | None
     value: float
     value_standard_error: float
     paths: int

@@ -67,8 +67,9 @@ def doubted(dated: DatedContract, state: State, market: MarketMap) -> Iterator[s
             asset = dated.contract.assets[line.asset]
             today = market.forward(asset, 0.0) * scale[line.asset]
             if line.reached(today):
-                yield (f"{claim.words}, but today's level of {asset}, {figure(today)}, has reached {figure(line.level)}: "
-                       "the contract is valued as reached today; check the spot, or the statement")
+                yield (f"{claim.words}, but today's level of {asset}, {figure(today)}, has reached "
+                       f"{figure(line.level)}: the contract is valued as reached today; check the spot, or the "
+                       "statement")
 
 
 def _dividends_watched(ready: Ready) -> Iterator[str]:

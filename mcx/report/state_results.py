@@ -18,7 +18,7 @@ class Fixed(Result):
 
 @dataclass(frozen=True, slots=True)
 class StatedLine(Result):
-    """What the contract states of a watch as of the close of a date, as 'yes', 'no' or a level: stated, not computed."""
+    """What the contract states of a watch as of the close of a date, not computed: 'yes', 'no' or a level."""
 
     date: str
     what: str

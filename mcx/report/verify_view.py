@@ -4,7 +4,8 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
-from mcx.report.price_view import Scale
+from mcx.report.model_view import show_model
+from mcx.report.price_scale import Scale
 from mcx.report.terminal import Page, decimals, fixed
 from mcx.report.verify_results import NO_EFFECT, NONE_THERE, ImpliedInput, SolvedTerm, VerifyResult, VerifyTable
 
@@ -65,6 +66,8 @@ def show_verification(result: VerifyResult, page: Page) -> None:
         far = "" if corner.share == 1.0 else f" (at {corner.share:.3g} of them: there is no such market further out)"
         page.line(f"  worst corner, every input at the end of its half-width{far}: {scale.show(corner.price, places)} "
                   f"{scale.unit}, which {'reaches' if corner.reaches else 'does not reach'} the quote; never the band")
+    if result.model_bracket:
+        show_model(result.model_bracket, scale, places, page)
     if result.inputs:
         page.heading("what each input's half-width does to the price")
         page.table(("input", "", "half-width", scale.unit, "error", ""), (

@@ -28,6 +28,9 @@ YEAR = 365.0  # days, as times are counted
 ROUNDING = 1e-6  # days
 ONE_LEVEL = ("the moment of a hit is known for one level of one asset; '{}' waits for several: give each a running "
              "value and an event of its own")
+FIRST_EXIT = ("'{}' waits for the first exit from between two levels, and the law of its moment is not worked out; pay "
+              "on a date whether it came, which is exact ('- {{at: expiry, if: {}, then: [{{pay: 1}}]}}'), or watch it "
+              "on dates")
 WHICH_FIRST = ("it ends the contract, and so may a hit of '{}' be first in the same stretch of time: which of the two "
                "comes first is not known; watch one of them on dates")
 
@@ -210,7 +213,9 @@ class Hits:
         found = self._levels.of(flag)
         running = stretch.hit.watch.running
         if len({(barrier.key.asset, barrier.op, level) for barrier, level in found}) != 1:
-            raise Unreadable(stretch.hit.event.at.place, ONE_LEVEL.format(running.name))
+            assets, sides = {barrier.key.asset for barrier, _ in found}, {barrier.op for barrier, _ in found}
+            text = FIRST_EXIT if len(assets) == 1 < len(sides) else ONE_LEVEL
+            raise Unreadable(stretch.hit.event.at.place, text.format(*[running.name] * 2))
         barrier, level = next(iter(found))
         return barrier.key.asset, level
 

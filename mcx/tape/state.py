@@ -60,8 +60,8 @@ class State:
     """The state of a contract on the valuation date. `running` holds values that are known, one or one for each
     asset, `terms` level terms that were observed, `fixings` the levels that were read, by day and asset, as they count;
     `ended` the day on which it ended, None where it has not; `uncounted` deliveries of which it is not fixed how many
-    shares they are, so that whole ones cannot be told from fractions; `denied` what is stated not to have been reached by
-    the end of the valuation date."""
+    shares they are, so that whole ones cannot be told from fractions; `denied` what is stated not to have been reached
+    by the end of the valuation date."""
 
     events: list[PastEvent] = field(default_factory=list)
     payments: list[FixedAmount] = field(default_factory=list)

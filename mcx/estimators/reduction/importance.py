@@ -166,4 +166,4 @@ def _climbed(start: np.ndarray, look: Callable[[np.ndarray], tuple[int, float, n
     return point
 
 
-IMPORTANCE = Method("importance", "paths drawn where the contract pays, weighted", Stage.NORMALS, change, reads_tape=True)
+IMPORTANCE = Method("importance", "paths drawn where the contract pays, weighted", Stage.NORMALS, change)

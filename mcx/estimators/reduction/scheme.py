@@ -84,15 +84,13 @@ class Draft:
 
 @dataclass(frozen=True, slots=True)
 class Method:
-    """A method of variance reduction. `excludes`: names of methods that it cannot go with, and why; `reads_tape`: it
-    looks for what it needs on the contract's tape."""
+    """A method of variance reduction. `excludes`: names of methods that it cannot go with, and why."""
 
     name: str
     about: str
     stage: Stage
     change: Callable[[Case, Draft], Draft]  # raises Inapplicable
     excludes: tuple[tuple[str, str], ...] = ()
-    reads_tape: bool = False
 
 
 @dataclass(frozen=True, slots=True)

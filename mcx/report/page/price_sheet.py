@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
+from mcx.report.model_results import ModelBracketResult
+from mcx.report.model_view import HEADS, model_rows
 from mcx.report.page.blocks import Facts, Notes, Picture, Sheet, Table, cut, notes
 from mcx.report.pictures.draw import Bar, Series, bars, curve, fan, intervals, lines
 from mcx.report.price_view import COLUMNS, PROBABILITIES, Scale, amounts, by_date, facts, headline
@@ -20,6 +22,7 @@ def price_sheet(result: PriceResult, scene: Scene | None) -> Sheet:
     interrupted = "Interrupted: the estimate so far. " if result.interrupted else ""
     blocks = [Facts("valuation", tuple(facts(result, scale))), *_legs(result, scale)]
     blocks += _probabilities(result, scene)
+    blocks += model_table(result.model_bracket, scale, scale.places(result.standard_error))
     blocks += surroundings(scene, scale.unit) if scene else ()
     blocks += _checks(result, scale)
     blocks += notes(("warnings", result.warnings), ("assumptions", result.assumptions or ("none",)))
@@ -48,6 +51,15 @@ def surroundings(scene: Scene, unit: str) -> Iterator[Picture]:
             f" The contract looks at: {seen}." if seen else "")
         yield Picture(f"how far {each.name} may go (risk-neutral, not a forecast)",
                       fan(f"quantiles of {each.name}", said, each, scene.ticks), said)
+
+
+def model_table(found: ModelBracketResult | None, scale: Scale, places: int) -> Iterator[Table]:
+    """The price at the vol of each level that the contract refers to, where the market states vols by strike."""
+    if found is not None:
+        rows, left = cut(list(model_rows(found, scale, places)), MOST_ROWS)
+        why = " ".join(f"Indicative only: {text}." for text in found.indicative)
+        yield Table("model bracket, apart from sampling and inputs", (*HEADS, scale.unit, "error"), rows,
+                    note=" ".join(filter(None, (why, left))))
 
 
 def evidence(scene: Scene) -> Iterator[Facts | Notes]:

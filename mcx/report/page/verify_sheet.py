@@ -4,8 +4,9 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
+from mcx.estimators.verify import MODEL
 from mcx.report.page.blocks import Facts, Notes, Picture, Sheet, Table, cut, notes
-from mcx.report.page.price_sheet import INTERVALS, evidence, surroundings
+from mcx.report.page.price_sheet import INTERVALS, evidence, model_table, surroundings
 from mcx.report.pictures.draw import Bar, bars, gap_ladder
 from mcx.report.price_view import Scale
 from mcx.report.scene import Scene
@@ -32,6 +33,7 @@ def verify_sheet(result: VerifyResult, scene: Scene | None) -> Sheet:
         *_ladder(result, scale, places)]
     blocks += notes(("what closes it", result.leads))
     blocks += [*_implied(result), *_inputs(result, scale, places), *_readings(result, scale, places)]
+    blocks += model_table(result.model_bracket, scale, places)
     blocks += surroundings(scene, scale.unit) if scene else ()
     blocks += notes(("warnings", result.warnings), ("assumptions", result.assumptions or ("none",)))
     blocks += evidence(scene) if scene else ()
@@ -40,9 +42,10 @@ def verify_sheet(result: VerifyResult, scene: Scene | None) -> Sheet:
 
 
 def _ladder(result: VerifyResult, scale: Scale, places: int) -> Iterator[Picture | Table]:
-    """The gap against each band; a band that was not stated is in the table only."""
+    """The gap against each band; a band that was not stated, and the model bracket, which does not lie evenly about the
+    price, are in the table only."""
     bands = [(band.name, scale.factor * band.half_width, ANSWERS[band.holds])
-             for band in result.bands if band.half_width is not None]
+             for band in result.bands if band.half_width is not None and band.name != MODEL]
     apart, error = scale.factor * result.gap.price, scale.factor * result.gap.standard_error
     shown = scale.show(result.gap.price, places)
     said = f"Gap of {shown} {scale.unit}; " + "; ".join(

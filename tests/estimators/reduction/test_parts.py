@@ -15,12 +15,12 @@ from mcx.dates.dating import date_on
 from mcx.estimators.nets import clock
 from mcx.estimators.plan import precision
 from mcx.estimators.price import value
-from mcx.estimators.ready import prepare
+from mcx.estimators.ready import Ready, prepare
 from mcx.estimators.reduction import choice
 from mcx.estimators.reduction.antithetic import paired
 from mcx.estimators.reduction.catalogue import conflict, scheme_of
 from mcx.estimators.reduction.choice import CHOICES, best
-from mcx.estimators.reduction.fit import Costs, chosen_controls, coefficients
+from mcx.estimators.reduction.fit import CONTROLLED, Costs, chosen_controls, coefficients
 from mcx.estimators.reduction.importance import mode, shifted
 from mcx.estimators.reduction.names import NAMES, wished
 from mcx.estimators.reduction.sample import Sampler
@@ -28,12 +28,19 @@ from mcx.estimators.reduction.scheme import Case, Control
 from mcx.faults import Refusal, RequestError
 from mcx.machine.draw_plan import DrawPlan
 from mcx.machine.orders import bridge, early_bridge
-from mcx.machine.run import draws
+from mcx.machine.run import draws, run
 from mcx.tape.adjoint import by_normals
 from mcx.tape.interpret import interpret
 
 SEED = 0x510E527FADE682D1
 EXAMPLES = Path(__file__).resolve().parents[3] / "payoffs" / "examples"
+
+
+def shipped(file: str, number: int) -> Ready:
+    """A contract of the examples."""
+    request = load([EXAMPLES / f"{file}.yaml"])
+    dated, _ = date_on(request.contracts[number], request.market)
+    return prepare(dated, request.market)[0]
 
 
 @pytest.mark.parametrize(("asked", "names"), [
@@ -161,11 +168,26 @@ def test_strata_share_out_the_end_of_a_path():
     np.testing.assert_array_equal(plain[:, 1:], strata[:, 1:])
 
 
+@pytest.mark.parametrize(("file", "number", "ratio"), [("barrier", 4, 20.0), ("worst_of_watched", 0, 3.0),
+                                                       ("worst_of_watched", 1, 1.5)])
+def test_controls_beside_a_hit_and_between_bounds(file: str, number: int, ratio: float):
+    """A rebate at the moment of a hit, and assets watched together: the controls read levels on dates only, lower the
+    variance and leave every other output as it is on the same paths, the distances between bounds among them."""
+    ready = shipped(file, number)
+    scheme = scheme_of(Case(ready, SEED), ("controls",))
+    plain, found = (run(program, seed=SEED, paths=1 << 15) for program in (ready.program, scheme.program))
+    outputs = ready.unrolled.tape.outputs
+    assert ready.unrolled.bracketed == any(output.kind == "gap" for output in outputs)
+    free = [number for number, output in enumerate(outputs) if output.kind not in CONTROLLED]
+    np.testing.assert_allclose(found.mean[free], plain.mean[free], rtol=1e-12)
+    error = np.hypot(found.standard_error, plain.standard_error)
+    assert np.all(np.abs(found.mean - plain.mean) <= 4.0 * error + 1e-12)
+    assert plain.variance[0] > ratio * found.variance[0]
+
+
 def test_only_a_contract_that_may_end_gets_the_early_bridge():
     """By the points of an autocall, and of an average."""
-    request = load([EXAMPLES / "autocall.yaml"])
-    dated, _ = date_on(request.contracts[0], request.market)
-    autocall, _ = prepare(dated, request.market)
+    autocall = shipped("autocall", 0)
     for ready, order in ((autocall, early_bridge), (made("average", FLAT), bridge)):
         plan = scheme_of(Case(ready, SEED), ("sobol-bridge",)).plan
         expected = order(clock(ready.market, ready.unrolled.grid))
