@@ -67,7 +67,7 @@ def show_verification(result: VerifyResult, page: Page) -> None:
         page.line(f"  worst corner, every input at the end of its half-width{far}: {scale.show(corner.price, places)} "
                   f"{scale.unit}, which {'reaches' if corner.reaches else 'does not reach'} the quote; never the band")
     if result.model_bracket:
-        show_model(result.model_bracket, scale, places, page)
+        show_model(result.model_bracket, scale, result.standard_error, page)
     if result.inputs:
         page.heading("what each input's half-width does to the price")
         page.table(("input", "", "half-width", scale.unit, "error", ""), (
