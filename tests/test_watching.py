@@ -198,8 +198,8 @@ def test_moments_follow_the_law_of_first_passage(direction: str, barrier: float,
     Brownian motion with drift (Borodin & Salminen 2002, formula 2.2.0.2)."""
     market = MARKET.replace("rates: {EUR: 4%}", "rates: {EUR: 0%}")
     definition = MOMENT if direction == "down" else MOMENT.replace("<=", ">=")
-    text = definition + document("moment", barrier=barrier, watched=ALWAYS, dates=f"{{count: {dates}, until: 1y}}") + market
-    paid = prepare(text, everything_drawn=True).by_path(40_000, SEED)["price"]
+    text = document("moment", barrier=barrier, watched=ALWAYS, dates=f"{{count: {dates}, until: 1y}}")
+    paid = prepare(definition + text + market, everything_drawn=True).by_path(40_000, SEED)["price"]
     paid = paid[paid > 0.0]
     flat = {"spot": 100.0, "rate": 0.0, "dividend_yield": 0.015, "vol": 0.22}
     ever = hit_by(direction, barrier, maturity=1.0, **flat)

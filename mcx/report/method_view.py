@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
+from mcx.estimators.reduction.names import NONE
 from mcx.report.method_results import MethodLine, MethodsResult
 from mcx.report.terminal import Page, decimals, fixed
 
@@ -17,14 +18,15 @@ def show_methods(result: MethodsResult, page: Page) -> None:
     page.heading("variance reduction, the most efficient first")
     page.table(("methods", unit, "std error", "z", "variance ratio", "cost", "efficiency", "to 1 bp"),
                (_row(line, factor, percent) for line in result.methods))
-    page.line("variance ratio: of plain sampling over this, at equal paths, ± its standard error; cost: time for a path "
-              "over that of plain sampling; efficiency: variance × time of plain sampling over this; z: distance from "
+    page.line("variance ratio: of plain sampling over this, at equal paths, ± its standard error; cost: processor time for a "
+              "path over that of plain sampling; efficiency: variance × time of plain sampling over this; z: distance from "
               "all others pooled; to 1 bp: seconds until the 95 % half-width is 1 bp of the "
               + ("notional" if percent else "price"))
     if result.closed_form is not None:
         page.line(f"closed form: {fixed(factor * result.closed_form, 8)} {unit}; z against it: " + ", ".join(
             f"{line.method} {line.z_closed_form:+.2f}" for line in result.methods if line.efficiency is not None))
-    noted = [f"{line.method}: {note}" for line in result.methods for note in line.notes]
+    noted = [f"{line.method}: {'; '.join(note.removeprefix(f'{line.method}: ') for note in line.notes)}"
+             for line in result.methods if line.notes]
     refused = [f"{one.method}: {one.reason}" for one in result.not_applied]
     for title, texts in (("what they found", noted), ("not applicable", refused), ("assumptions", result.assumptions),
                          ("not in the model", result.limits), ("read it with care", result.cautions)):
@@ -40,10 +42,11 @@ def _row(line: MethodLine, factor: float, percent: bool) -> Iterator[str]:
     yield fixed(factor * line.price, places)
     yield f"{error:.2g}" if line.efficiency is not None else "exact"
     yield f"{line.z:+.2f}"
-    yield "" if line.variance_ratio is None else f"{_short(line.variance_ratio)} ± {_short(line.variance_ratio_error)}"
+    yield "" if line.variance_ratio is None else "1" if line.method == NONE else (
+        f"{_short(line.variance_ratio)} ± {_short(line.variance_ratio_error)}")
     yield f"{line.cost_ratio:.2f}"
     yield "" if line.efficiency is None else _short(line.efficiency)
-    yield f"{line.seconds_to_1bp:.2g}"
+    yield "" if line.efficiency is None else f"{line.seconds_to_1bp:.2g}"
 
 
 def _short(number: float) -> str:

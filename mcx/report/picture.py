@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import math
 from pathlib import Path
+from textwrap import fill
 
 from mcx.faults import RequestError
 from mcx.report.method_results import MethodsResult
@@ -16,6 +17,7 @@ COLOURS = ("#000000", "#0072B2", "#D55E00", "#009E73", "#CC79A7", "#E69F00", "#5
 DASHES = ("-", "--", "-.", ":")
 MARKERS = ("o", "s", "^", "D", "v", "P", "X")
 SUFFIXES = (".png", ".svg")
+WIDTH = 110  # letters in a line below
 
 
 def check_picture(file: str | Path) -> None:
@@ -50,9 +52,10 @@ def draw_methods(result: MethodsResult, file: str | Path) -> None:
         seconds, errors = [point.seconds for point in points], [factor * point.standard_error for point in points]
         axes.loglog(seconds, errors, color=colour, linestyle=DASHES[number // len(COLOURS) % len(DASHES)],
                     marker=MARKERS[number % len(MARKERS)], markersize=4.5, linewidth=1.6)
-        ends.append((seconds[-1], errors[-1], line.method.replace(",", " + "), colour))
+        ends.append((seconds[-1], errors[-1], _named(line.method), colour))
     _name_lines(axes, ends)
-    axes.set_xlabel("seconds")
+    exact = ", ".join(_named(line.method) for line in result.methods if line.efficiency is None)
+    axes.set_xlabel("seconds" + ("\n" + fill(f"exact, and so not drawn: {exact}", WIDTH) if exact else ""))
     axes.set_ylabel(f"standard error, {'% of the notional' if factor > 1.0 else f'{result.currency} per unit'}")
     axes.set_title(f"{result.contract}: error against time", loc="left")
     axes.grid(True, which="major", alpha=0.35)
@@ -63,6 +66,10 @@ def draw_methods(result: MethodsResult, file: str | Path) -> None:
         canvas.print_figure(str(file), dpi=150)
     except OSError as error:
         raise RequestError(f"{file}: the picture cannot be written: {error.strerror or error}") from None
+
+
+def _named(method: str) -> str:
+    return method.replace(",", " + ")
 
 
 def _name_lines(axes, ends: list[tuple[float, float, str, str]]) -> None:
