@@ -47,7 +47,7 @@ def show_price(result: PriceResult, page: Page) -> None:
         page.heading(PROBABILITIES)
         _probabilities(result, page)
     if result.model_bracket:
-        show_model(result.model_bracket, scale, scale.places(result.standard_error), page)
+        show_model(result.model_bracket, scale, result.standard_error, page)
     _checks(result, scale, page)
     for title, texts in (("warnings", result.warnings), ("assumptions", result.assumptions or ("none",)),
                          ("not in the model", result.limits), ("read it with care", result.cautions)):
@@ -76,7 +76,7 @@ def facts(result: PriceResult, scale: Scale) -> Iterator[tuple[str, str]]:
     if result.bracket:
         yield "bounds", bounds(result, scale)
     if result.model_bracket:
-        yield "model bracket", model_line(result.model_bracket, scale, places)
+        yield "model bracket", model_line(result.model_bracket, scale, result.standard_error)
     yield "paths", f"{result.paths:,} in {result.seconds:.2f} s; asked for: {result.planned.asked}"
     yield "seed", f"{result.seed}; variance reduction: {result.reduction}"
     for number, note in enumerate(result.reduction_notes):
@@ -192,8 +192,7 @@ def show_prices(table: PriceTable, page: Page) -> None:
         if each.bracket:
             page.line(f"{each.contract}: {bounds(each, Scale(each))}")
         if each.model_bracket:
-            scale = Scale(each)
-            line = model_line(each.model_bracket, scale, scale.places(each.standard_error))
+            line = model_line(each.model_bracket, Scale(each), each.standard_error)
             page.line(f"{each.contract}: model bracket {line}")
     if table.not_valued:
         page.line(f"not valued: {', '.join(table.not_valued)}")

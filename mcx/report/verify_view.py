@@ -70,7 +70,7 @@ def show_verification(result: VerifyResult, page: Page) -> None:
     if result.worst_corner is not None:
         page.line(f"  {corner(result.worst_corner, scale, places)}")
     if result.model_bracket:
-        show_model(result.model_bracket, scale, places, page)
+        show_model(result.model_bracket, scale, result.standard_error, page)
     if result.inputs:
         page.heading("what each input's half-width does to the price")
         page.table(("input", "", "half-width", scale.unit, "error", ""), (

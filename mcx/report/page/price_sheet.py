@@ -35,7 +35,7 @@ def price_sheet(result: PriceResult, scene: Scene | None) -> Sheet:
     interrupted = "Interrupted: the estimate so far. " if result.interrupted else ""
     blocks = [Facts("valuation", tuple(facts(result, scale))), *_legs(result, scale), *_kept(result, scale)]
     blocks += _probabilities(result, scene)
-    blocks += model_table(result.model_bracket, scale, scale.places(result.standard_error))
+    blocks += model_table(result.model_bracket, scale, result.standard_error)
     blocks += surroundings(scene, scale.unit) if scene else ()
     blocks += _checks(result, scale)
     blocks += notes(("warnings", result.warnings), ("assumptions", result.assumptions or ("none",)))
@@ -75,10 +75,10 @@ def _fan(each: Fan, scene: Scene, unit: str) -> Picture:
                    fan(f"how far {each.name} may go", said, each, scene.ticks, unit), drawn)
 
 
-def model_table(found: ModelBracketResult | None, scale: Scale, places: int) -> Iterator[Table]:
+def model_table(found: ModelBracketResult | None, scale: Scale, standard_error: float) -> Iterator[Table]:
     """The price at the vol of each level that the contract refers to, where the market states vols by strike."""
     if found is not None:
-        rows, left = cut(list(model_rows(found, scale, places)), MOST_ROWS)
+        rows, left = cut(list(model_rows(found, scale, standard_error)), MOST_ROWS)
         why = " ".join(f"Indicative only: {text}." for text in found.indicative)
         yield Table("model bracket, apart from sampling and inputs", (*HEADS, scale.unit, "error"), rows,
                     note=" ".join(filter(None, (why, left))))

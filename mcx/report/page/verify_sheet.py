@@ -33,7 +33,7 @@ def verify_sheet(result: VerifyResult, scene: Scene | None) -> Sheet:
         *_ladder(result, scale, places)]
     blocks += notes(("what closes it", result.leads))
     blocks += [*_implied(result), *_inputs(result, scale, places), *_readings(result, scale, places),
-               *model_table(result.model_bracket, scale, places), *_footing(result, scale),
+               *model_table(result.model_bracket, scale, result.standard_error), *_footing(result, scale),
                *_money(result, scale, places)]
     blocks += surroundings(scene, scale.unit) if scene else ()
     blocks += notes(("warnings", result.warnings), ("assumptions", result.assumptions or ("none",)))
