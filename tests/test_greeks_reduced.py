@@ -24,6 +24,8 @@ from mcx.estimators.methods import methods
 from mcx.estimators.plan import Precision
 from mcx.estimators.price import value
 from mcx.estimators.reduction.antithetic import paired
+from mcx.estimators.reduction.catalogue import BY_NAME
+from mcx.estimators.reduction.scheme import Stage
 from mcx.leaves.jacobian import inputs
 from mcx.machine.run import Stream, run, run_scrambles
 from mcx.tape.interpret import interpret
@@ -242,6 +244,11 @@ def test_what_is_fitted_to_the_price_is_refused(tmp_path: Path, name: str):
     """With its reason, and exit code 2."""
     refused(mcx("greeks", written(tmp_path, CALL_CONTRACT + MARKET), "--reduction", name),
             f"no variance reduction '{name}' of sensitivities, since", NOT_OF_SENSITIVITIES[name])
+
+
+def test_only_what_changes_how_paths_are_drawn_is_taken():
+    """Sensitivities know of a method's plan of draws, and of pairs; of nothing else that it does to a tape."""
+    assert {name for name in SUPPORTED if BY_NAME[name].stage is not Stage.DRAWS} == {"antithetic"}
 
 
 @pytest.mark.parametrize(("asked", "said"), [
