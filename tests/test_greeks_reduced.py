@@ -28,7 +28,10 @@ from mcx.estimators.reduction.catalogue import BY_NAME
 from mcx.estimators.reduction.scheme import Stage
 from mcx.leaves.jacobian import inputs
 from mcx.machine.run import Stream, run, run_scrambles
+from mcx.tape.builder import Builder
 from mcx.tape.interpret import interpret
+from mcx.tape.ops import Op
+from mcx.tape.program import Output, Sum
 
 SEED, PATHS = 0x9B05688C2B3E6C1F, 1 << 16
 POINTS = ("sobol-bridge", "sobol-components")
@@ -161,6 +164,24 @@ def test_a_pair_sums_a_path_and_its_mirror(name: str):
         assert (one.uniform < 0) == (other.uniform < 0)
         if one.uniform >= 0:
             assert interpret(single, values, z, u)[one.uniform] == interpret(pair, values, z, u)[other.uniform]
+
+
+def test_a_mirror_turns_the_scale_of_a_step_too():
+    """A score is summed up by steps on normals, whose scale may itself hang on what was drawn."""
+    builder = Builder()
+    one, other = (builder.input(Op.NORMAL, k) for k in (0, 1))
+    scale = builder.emit(Op.EXP, one)
+    value = builder.emit(Op.STEP, one, scale, other)
+    tape = builder.tape([Output.of("price", value)], normals=2, sums=[Sum(value, scale), Sum(other, one), Sum(value)])
+    pair, z = paired(tape), np.random.default_rng(SEED).normal(size=(2, 100))
+
+    def on(normals: np.ndarray) -> np.ndarray:
+        value = normals[0] + np.exp(normals[0]) * normals[1]
+        return np.array([value * np.exp(normals[0]), normals[0] * normals[1], value])
+
+    known = interpret(pair, (), z)
+    found = [np.prod([np.broadcast_to(known[k], 100) for k in part.factors], axis=0) for part in pair.sums]
+    np.testing.assert_allclose(found, 0.5 * (on(z) + on(-z)), rtol=1e-12, atol=1e-12)
 
 
 @pytest.mark.parametrize("reduction", [*EVERY, ()], ids=label)
