@@ -6,6 +6,7 @@ from __future__ import annotations
 import math
 from dataclasses import replace
 from math import exp, sqrt
+from pathlib import Path
 
 import closed_forms as forms
 import numpy as np
@@ -13,13 +14,19 @@ import pytest
 from scipy.special import ndtr
 from test_laws import FLAT, SEED, made
 
+from mcx.checked.load import load
+from mcx.dates.dating import date_on
+from mcx.estimators.ready import prepare
 from mcx.estimators.reduction.candidates import Market, _exchange, candidates, evenly
 from mcx.estimators.reduction.catalogue import scheme_of
 from mcx.estimators.reduction.controls import change
+from mcx.estimators.reduction.fit import PILOT_PATHS
+from mcx.estimators.reduction.hedge import change as hedge
 from mcx.estimators.reduction.laws import Lognormal, Walk, above_mean, call_mean, exchange_mean
 from mcx.estimators.reduction.residual import residuals
 from mcx.estimators.reduction.scheme import Case, Draft
 from mcx.estimators.reduction.turning import Terms, Turn, turns
+from mcx.estimators.reduction.watched import Watched
 from mcx.machine.run import Stream, draws, run, values_by_path
 from mcx.tape.builder import Builder
 from mcx.tape.ops import Op
@@ -166,3 +173,38 @@ def test_the_draft_keeps_the_contract_s_outputs_first():
     count = len(ready.unrolled.observed.outputs)
     assert draft.tape.outputs[:count] == ready.unrolled.observed.outputs
     assert len(draft.tape.outputs) == count + len(draft.controls)
+
+
+@pytest.mark.parametrize(("level", "out"), [(90.0, -1.0), (115.0, 1.0)])
+def test_a_barrier_watched_on_dates_is_moved_away_from_the_spot(level: float, out: float):
+    """By 0.5826 deviations of a step, Broadie, Glasserman & Kou (1997), from memory: -zeta(1/2) / sqrt(2 pi)."""
+    steps = np.full(12, 0.22**2 / 12)
+    watched = Watched(0, level, (), steps, np.zeros(12), 100.0, 0.1)
+    assert watched.moved == pytest.approx(math.log(level) + out * 0.5826 * 0.22 / sqrt(12.0), abs=1e-6)
+
+
+def test_nothing_is_held_after_the_end():
+    """On paths that an autocall ended the gains of every later holding are 0, on others they are not."""
+    request = load([Path(__file__).resolve().parents[3] / "payoffs" / "examples" / "autocall.yaml"])
+    dated, _ = date_on(request.contracts[0], request.market)
+    ready = prepare(dated, request.market)[0]
+    draft = hedge(Case(ready, SEED), Draft(ready.unrolled.observed))
+    outputs = draft.tape.outputs
+    ends = [(number, output.day) for number, output in enumerate(outputs) if output.kind == "end"]
+    times = {str(moment.day): moment.day.time for moment in dated.moments}
+    values = values_by_path(ready.lowered(ready.expanded(draft.tape)), seed=SEED, paths=4096)
+    day, first = min((times[day], number) for number, day in ends if day in times)
+    later = [number for number, output in enumerate(outputs) if output.kind == "control"
+             and float(output.subject.partition("held from ")[2].partition("y")[0]) > day]
+    ended = values[first] == 1.0
+    assert later and 100 < ended.sum() < 4000
+    assert np.all(values[later][:, ended] == 0.0) and np.mean(values[later][:, ~ended].std(axis=1) > 0.01) > 0.5
+
+
+def test_a_pilot_grows_with_the_candidates(monkeypatch: pytest.MonkeyPatch):
+    """So many paths for each, else coefficients would fit the pilot."""
+    case = Case(made("average", FLAT), SEED)
+    candidates_of = len(change(case, Draft(case.ready.unrolled.observed)).controls)
+    assert scheme_of(case, ("controls",)).fit_paths == PILOT_PATHS
+    monkeypatch.setattr("mcx.estimators.reduction.fit.PATHS_EACH", 2000)
+    assert 2000 * candidates_of <= scheme_of(case, ("controls",)).fit_paths < 4000 * candidates_of
