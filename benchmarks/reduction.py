@@ -16,22 +16,26 @@ import sys
 import time
 from dataclasses import replace
 from pathlib import Path
+from statistics import mean, median
 
 import numpy as np
 from points import ready_of
 from scipy.special import ndtr
 
 from mcx.checked.load import load
-from mcx.dates.dating import date_contract
+from mcx.dates.dating import date_on
+from mcx.estimators.estimate import NORMAL_95, Estimate
+from mcx.estimators.plan import precision
 from mcx.estimators.ready import Ready, prepare
 from mcx.estimators.reduction.catalogue import scheme_of
 from mcx.estimators.reduction.choice import best
 from mcx.estimators.reduction.sample import Sampler
-from mcx.estimators.reduction.scheme import Case
+from mcx.estimators.reduction.scheme import Case, Scheme
 from mcx.machine.run import run
 
 REPLICATES, PATHS, ROUNDS = 64, 1 << 14, 15
-PLAIN_PATHS, LONG = 1 << 20, 2.0  # seconds of plain sampling that the choice is measured at
+LONG, TIMED = 1.5, 0.1  # seconds of plain sampling that the choice is measured at, and of a run that is timed
+FEWEST, SEEDS = 1 << 11, 4
 MARKET = """---
 market: 0y
 rates: {EUR: 3%}
@@ -91,7 +95,7 @@ def main() -> None:
         print(f"{title:50} {','.join(names):12} {goal:8,} {ratio:16,.0f} {ratio * math.sqrt(2 / (REPLICATES - 1)):9,.0f} "
               f"{cost:6.2f}")
     ready = ready_of(ASIAN + MARKET.replace("VOL", "20"), "asian")
-    print(f"a pair costs {2.0 * path_time(ready, ('antithetic',)) / path_time(ready, ()):.2f} paths of the average; "
+    print(f"a pair costs {2.0 * path_time(ready, ('antithetic',)):.2f} paths of the average; "
           f"goal 1.4")
     if "--auto" in sys.argv:
         choices()
@@ -116,42 +120,65 @@ def ratios(ready: Ready, names: tuple[str, ...], plain: float | None) -> tuple[f
     for seed in range(1, REPLICATES + 1):
         sampler = Sampler(scheme_of(Case(ready, seed), names), seed)
         means.append(sampler.sample(PATHS, first_output_only=True).results[0].value)
-    return plain / (PATHS * float(np.var(means, ddof=1))), path_time(ready, names) / path_time(ready, ())
+    return plain / (PATHS * float(np.var(means, ddof=1))), path_time(ready, names)
 
 
 def path_time(ready: Ready, names: tuple[str, ...]) -> float:
-    """Processor time of a path of the contract's price, on one thread; the least of some runs."""
-    sampler = Sampler(scheme_of(Case(ready, 1), names), 1, threads=1)
-    taken = []
-    for _ in range(ROUNDS):
-        begun = time.thread_time()
-        paths = sampler.sample(1 << 18, first_output_only=True).results[0].paths
-        taken.append((time.thread_time() - begun) / paths)
-    return min(taken)
+    """Processor time of a path of the contract's price over that of a plain path, on one thread: the median over pairs
+    of runs one after the other."""
+    methods, plain = (Sampler(scheme_of(Case(ready, 1), each), 1, threads=1) for each in (names, ()))
+    return median(_each(methods, 1 << 18)[0] / _each(plain, 1 << 18)[0] for _ in range(ROUNDS))
+
+
+def _each(sampler: Sampler, paths: int) -> tuple[float, Estimate]:
+    """Processor time of a path of the price, and its estimate."""
+    begun = time.thread_time()
+    (found,) = sampler.sample(paths, first_output_only=True).results
+    return (time.thread_time() - begun) / found.paths, found
 
 
 def choices() -> None:
     """For every shipped example the time of the choice, its pilot included, to the error that plain sampling reaches in
-    some seconds, over those seconds."""
-    print(f"{'example':60} {'choice':26} {'pilot s':>8} {'time over plain':>16}")
+    some seconds, over those seconds; on one thread, and in processor time. The kernels are compiled before."""
+    print(f"{'example':60} {'plain s':>7} {'choice':26} {'pilot s':>8} {'time over plain':>16}")
+    worst = 0.0
     for file in sorted((Path(__file__).resolve().parents[1] / "payoffs" / "examples").glob("*.yaml")):
-        request = load([file])
+        request = load([file, *sorted(file.parent.glob(f"{file.stem}*.csv"))])
         for contract in request.contracts:
-            dated, _ = date_contract(contract, request.market.valuation)
-            ready, _ = prepare(dated, request.market)
-            case = Case(ready, 1)
-            begun = time.perf_counter()
-            scheme = best(case)
-            pilot = time.perf_counter() - begun
-            plain, chosen = (_burden(Sampler(each, 1)) for each in (scheme_of(case, ()), scheme))
-            print(f"{contract.title[:59]:60} {scheme.label:26} {pilot:8.2f} {pilot / LONG + chosen / plain:16.3f}")
+            ready, _ = prepare(date_on(contract, request.market)[0], request.market)
+            title = contract.title if len(contract.title) < 60 else contract.title[:57] + "..."
+            plain = Sampler(scheme_of(Case(ready, 1, 1), ()), 1, threads=1)
+            _each(plain, FEWEST)
+            paths = int(max(TIMED / _each(plain, 1 << 14)[0], FEWEST))
+            seconds, found = _each(plain, paths)
+            error, wanted = found.standard_error, int(LONG / seconds)
+            target = error * math.sqrt(found.paths / wanted)
+            case, taken = Case(ready, 1, 1), []
+            for _ in range(3):
+                begun = time.process_time()
+                scheme = best(case, precision(wanted, None, None))
+                taken.append(time.process_time() - begun)
+            pilot = median(taken)
+            ratio = 1.0 if not scheme.names else _time_to(scheme, target, plain, paths) / LONG
+            worst = max(worst, pilot / LONG + ratio)
+            print(f"{title:60} {LONG:7.1f} {scheme.label:26} {pilot:8.3f} {pilot / LONG + ratio:16.4f}", flush=True)
+    print(f"the worst: {worst:.3f}; goal 1.1")
 
 
-def _burden(sampler: Sampler) -> float:
-    """Variance times time."""
-    begun = time.perf_counter()
-    found = sampler.sample(1 << 17, first_output_only=True).results[0]
-    return found.standard_error**2 * (time.perf_counter() - begun)
+def _time_to(scheme: Scheme, target: float, plain: Sampler, paths: int) -> float:
+    """Seconds until a scheme's error is the target: in runs of growing numbers of paths until it is or they take as long
+    as a run of plain paths, and on from there as plain errors shrink. Times are those of plain sampling's long run, times
+    ratios of pairs."""
+    sampler, size = Sampler(scheme, 1, threads=1), FEWEST
+    while True:
+        found = [_each(replace(sampler, seed=seed), size)[1] for seed in range(1, SEEDS + 1)]
+        square = mean(one.standard_error**2 * (one.quantile / NORMAL_95) ** 2 for one in found)
+        if square <= target**2 or 4 * size > paths:
+            break
+        size *= 4
+    pairs = [(_each(sampler, size)[0], _each(plain, size)[0]) for _ in range(5)]
+    ratio = median(one / other for one, other in pairs)
+    return found[0].paths * square / target**2 * ratio * median(_each(plain, paths)[0] for _ in range(3))
 
 
 if __name__ == "__main__":

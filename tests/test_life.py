@@ -3,15 +3,18 @@ observation dates; values of the future, with what was paid, are a martingale ov
 
 from __future__ import annotations
 
+from dataclasses import replace
 from datetime import date, timedelta
 from math import exp, log, pi, sqrt
 
 import numpy as np
 import pytest
-from helpers import Ready, prepare
-from scipy.special import ndtr
+from front_door import EXAMPLES
+from helpers import Ready, prepare, ready_of, request_of
+from scipy.special import ndtr, ndtri
 
 import mcx
+from mcx.checked.load import Request
 
 SEED, PATHS = 20261201, 4096
 RATE, YIELD, VOL, SPREAD = 0.021, 0.024, 0.2, 0.008
@@ -64,6 +67,15 @@ def exact(text: str) -> float:
     return prepare(text).price(PATHS, SEED).mean
 
 
+def on(request: Request, today: date, spot: float, fixings: dict[str, float] | None = None) -> Ready:
+    """The only contract of a request on another day of its flat market, with the fixings up to that day."""
+    known = {date.fromisoformat(day): level for day, level in (fixings or {}).items() if day <= str(today)}
+    asset = request.market.assets["harbour"]
+    asset = replace(asset, spot=replace(asset.spot, value=spot))
+    seen = replace(request.market, valuation=today, assets={"harbour": asset}, fixings={"harbour": known})
+    return ready_of(replace(request, market=seen))
+
+
 # The state written in by hand
 
 HISTORY = {"2027-03-01": 88.4, "2027-06-01": 97.2, "2027-09-01": 84.9, "2027-12-01": 83.1, "2028-03-01": 80.2}
@@ -100,36 +112,64 @@ events:
 """
 
 
+OBSERVED = [date(2027, 3, 1), date(2027, 6, 1), date(2027, 9, 1), date(2027, 12, 1), date(2028, 3, 1), date(2028, 6, 1),
+            date(2028, 9, 1), date(2028, 12, 1)]
+
+
 def by_hand(today: date, fixings: dict[str, float], touched: bool = False) -> str:
     """A new contract with the dates that are left and the state that the fixings have made of the old one."""
-    ends = [date(2027, 3, 1), date(2027, 6, 1), date(2027, 9, 1), date(2027, 12, 1), date(2028, 3, 1), date(2028, 6, 1),
-            date(2028, 9, 1), date(2028, 12, 1)]
     missed = 0.0
-    for day in ends:
+    for day in OBSERVED:
         if day <= today and str(day) in fixings:
             missed = 0.0 if fixings[str(day)] >= 90 else missed + 0.025
-    left = ", ".join(str(day) for day in ends if day > today)
+    left = ", ".join(str(day) for day in OBSERVED if day > today)
     return BY_HAND + (f"contract: new\n{HEAD}payoff: by_hand\nterms:\n  observations: [{left}]\n"
                       f"  missed: {missed:.4%}\n  touched: {str(touched).lower()}\n---\n".replace(
                           "start: 2026-12-01", f"start: {today}"))
 
 
-@pytest.mark.parametrize("low", [80.2, 69.5])
-def test_day_by_day_along_a_history_the_value_is_that_of_a_new_contract_with_its_state(low: float):
-    """On the same numbers to the last digits: missed coupons, a touched barrier. The coupon observed on 2027-06-01 is
-    paid five business days later and owed until then."""
+def weekdays(first: date, last: date) -> list[date]:
+    days = (first + timedelta(days=k) for k in range((last - first).days + 1))
+    return [day for day in days if day.weekday() < 5]
+
+
+@pytest.mark.parametrize(("low", "days"), [(80.2, weekdays(date(2027, 3, 1), date(2028, 3, 31))),
+                                           (69.5, weekdays(date(2027, 8, 23), date(2027, 12, 3)))])
+def test_day_by_day_along_a_history_the_value_is_that_of_a_new_contract_with_its_state(low: float, days: list[date]):
+    """Every business day, on the same numbers to the last digits: missed coupons, a touched barrier. The coupon
+    observed on 2027-06-01 is paid five business days later and owed until then."""
     history = {**HISTORY, "2027-09-01": low}
-    day = date(2027, 3, 2)
-    while day < date(2028, 4, 1):
+    old = request_of(AUTOCALL + market(date(2026, 12, 1), 100.0))
+    for day in days:
+        if day == days[0] or day in OBSERVED:
+            touched = low < 70 and day >= date(2027, 9, 1)
+            new = request_of(by_hand(day, history, touched) + market(day, 100.0))
         spot = 85.0 + (day.toordinal() * 7919 % 13)
-        found = prepare(AUTOCALL + market(day, spot, history))
-        touched = low < 70 and day >= date(2027, 9, 1)
-        new = exact(by_hand(day, history, touched) + market(day, spot))
+        found = on(old, day, spot, history)
         due = (date(2027, 6, 8) - day).days / 365
         owed = 0.05 * exp(-(RATE + SPREAD) * due) if date(2027, 6, 1) <= day <= date(2027, 6, 8) else 0.0
-        assert found.price(PATHS, SEED).mean == pytest.approx(new + owed, rel=1e-12), day
+        fresh = on(new, day, spot).price(64, SEED).mean
+        assert found.price(64, SEED).mean == pytest.approx(fresh + owed, rel=1e-12), day
         assert ("owed" in found.names) == bool(owed)
-        day += timedelta(days=9 if abs((day - date(2027, 6, 4)).days) > 9 else 1)
+
+
+def test_day_by_day_an_average_is_what_its_fixings_leave_of_it():
+    """Every day of the averaging, on the same numbers: the note with its fixings is one of fewer dates whose payment
+    holds their sum."""
+    own = ("payoff: rest\nterms: {averaging: {type: dates}, fixed: {type: number}}\nrunning:\n"
+           "  sum: {total: spot, at: averaging}\nevents:\n  - at: averaging.last\n"
+           "    pay: 90% + max((sum + fixed) / 400 - 95%, 0)\n---\n")
+    dates = OBSERVED[:4]
+    old = request_of(TAIL + market(date(2026, 12, 1), 100.0))
+    for day in weekdays(date(2026, 12, 2), date(2027, 11, 30)):
+        if day == date(2026, 12, 2) or day in dates:
+            fixed = sum(HISTORY[str(each)] for each in dates if each <= day)
+            left = ", ".join(str(each) for each in dates if each > day)
+            terms = f"terms: {{averaging: [{left}], fixed: {fixed!r}}}\n---\n"
+            new = request_of(own + f"contract: new\n{HEAD}payoff: rest\n{terms}" + market(day, 100.0))
+        spot = 85.0 + (day.toordinal() * 7919 % 13)
+        prices = [on(old, day, spot, HISTORY).price(64, SEED).mean, on(new, day, spot).price(64, SEED).mean]
+        assert prices[0] == pytest.approx(prices[1], rel=1e-12), day
 
 
 def test_averages_so_far():
@@ -178,6 +218,33 @@ def test_value_is_continuous_through_an_observation(contract: str, observed: dat
     assert values == pytest.approx([values[0]] * 4, rel=1e-9)
 
 
+@pytest.mark.parametrize("spot", [91.0, 97.3, 101.5])
+@pytest.mark.parametrize("contract", [AUTOCALL, TAIL])
+def test_the_fixing_of_the_day_changes_nothing_but_what_is_known(contract: str, spot: float):
+    """With its vol: on the day with a fixing at the spot and without it the value is the same on the same numbers, and
+    the value the day before is the mean of the values over the fixing to come, near a coupon barrier and the call as
+    elsewhere, on 128 strata of that day's move. The day after nothing but a day's time has gone."""
+    today = date(2027, 9, 1)
+    early = {day: level for day, level in HISTORY.items() if day < str(today)}
+    request = request_of(contract + market(date(2026, 12, 1), 100.0))
+    on_the_day, fixed = (on(request, today, spot, each) for each in (early, early | {str(today): spot}))
+    assert on_the_day.price(PATHS, SEED).mean == pytest.approx(fixed.price(PATHS, SEED).mean, rel=1e-12)
+    before = on(request, today - timedelta(days=1), spot, early).price(1 << 16, SEED)
+    moves = ndtri((np.arange(128) + np.random.default_rng(7).random(128)) / 128)
+    found = []
+    for number, move in enumerate(moves):
+        level = spot * exp((RATE - YIELD - VOL**2 / 2) / 365 + VOL * sqrt(1 / 365) * move)
+        then = on(request, today, level, early | {str(today): level})
+        found.append(then.price(256, SEED + number).mean * exp(-(RATE + SPREAD) / 365))
+    error = np.std(np.diff(found), ddof=1) / sqrt(2 * len(found))  # of neighbours: the strata hardly differ
+    assert abs(np.mean(found) - before.mean) < 4 * sqrt(error**2 + before.error**2)
+    assert error < 1e-3
+    after = on(request, today + timedelta(days=1), spot, early | {str(today): spot})
+    paid = [each.amount for each in after.unrolled.state.payments if each.day.date == today]
+    assert abs(after.price(PATHS, SEED).mean - fixed.price(PATHS, SEED).mean) < 2e-3
+    assert len(paid) == (contract is AUTOCALL and spot >= 90)
+
+
 # A martingale over histories
 
 
@@ -193,15 +260,74 @@ def test_value_and_what_was_paid_is_a_martingale(contract: str, dates: tuple[str
     steps = np.diff([0.0, *times])
     logs = np.log(100.0) + np.cumsum((RATE - YIELD - VOL**2 / 2) * steps + VOL * np.sqrt(steps) * normals, axis=1)
     found = []
+    request = request_of(contract + market(start, 100.0))
     for number, levels in enumerate(np.exp(logs)):
         history = dict(zip(dates, map(float, levels), strict=False))
-        ready = prepare(contract + market(then, float(levels[-1]), history))
+        ready = on(request, then, float(levels[-1]), history)
         value = ready.price(512, SEED + number).mean * exp(-(RATE + SPREAD) * times[-1])
         found.append(value + paid_before(ready, start))
     mean, error = np.mean(found), np.std(found, ddof=1) / sqrt(len(found))
     today = prepare(contract + market(start, 100.0)).price(1 << 16, SEED)
     assert abs(mean - today.mean) < 4 * sqrt(error**2 + today.error**2)
     assert error < 0.015
+
+
+def test_it_is_a_martingale_under_cash_dividends_and_a_quanto():
+    """What is left of the spot without its dividends is lognormal and drifts under the measure of the contract's
+    currency; the level is that and the dividends still to come, at the growth in the asset's own."""
+    start, then = date(2026, 12, 1), date(2027, 9, 20)
+    own, pull, exes = 0.04, -0.8 * VOL * 0.09, (date(2027, 5, 10), date(2027, 11, 10))
+
+    def to_come(day: date) -> float:
+        return sum(2.5 * exp(-own * (ex - day).days / 365) for ex in exes if ex > day)
+
+    asset = (f"currency: USD, dividends: [{', '.join(f'{{ex: {ex}, cash: 2.5}}' for ex in exes)}], "
+             "quanto: {fx_vol: 9%, fx_correlation: -80%, fx: EUR per USD}")
+    now, later = (request_of(TAIL + market(day, 100.0).replace(f"currency: EUR, yield: {YIELD:.4%}", asset).replace(
+        f"EUR: {RATE:.4%}}}\nfunding", f"EUR: {RATE:.4%}, USD: 4%}}\nfunding")) for day in (start, then))
+    days = [*OBSERVED[:3], then]
+    times = np.array([(day - start).days / 365 for day in days])
+    steps = np.diff([0.0, *times])
+    normals = np.random.default_rng(11).standard_normal((480, len(times)))
+    logs = np.cumsum((own - pull - VOL**2 / 2) * steps + VOL * np.sqrt(steps) * normals, axis=1)
+    found = []
+    for number, path in enumerate((100.0 - to_come(start)) * np.exp(logs)):
+        levels = [float(left) + to_come(day) for left, day in zip(path, days, strict=True)]
+        history = {str(day): level for day, level in zip(days[:3], levels, strict=False)}
+        value = on(later, then, levels[-1], history).price(256, SEED + number).mean
+        found.append(value * exp(-(RATE + SPREAD) * times[-1]))
+    today = ready_of(now).price(1 << 16, SEED)
+    moved = np.exp(logs - (own - pull) * times) - 1.0  # of mean zero, so that they sharpen the mean as controls
+    (mean, *slopes), *_ = np.linalg.lstsq(np.column_stack([np.ones(len(found)), moved]), found, rcond=None)
+    left_over = found - mean - moved @ slopes
+    error = np.std(left_over, ddof=5) / sqrt(len(found))
+    assert abs(mean - today.mean) < 4 * sqrt(error**2 + today.error**2)
+    assert error < 0.002
+
+
+def test_it_is_a_martingale_where_the_contract_states_what_it_hit():
+    """A barrier watched all the time: what lies before the later day is drawn by the law of a bridge, and stated."""
+    start, then, level = date(2026, 12, 1), date(2027, 9, 20), 80.0
+    contract = ("contract: watched\n" + HEAD.replace("settlement", "HAPPENEDday_count: Actual/360\nsettlement")
+                + "payoff: barrier_reverse_convertible\nterms: {initial: 100, strike: 100%, knock_in: 80%, coupon: 6%, "
+                "watched: {continuous: [2026-12-01, final]}, coupon_dates: [2027-06-01, 2027-12-01], "
+                "final: 2027-12-01, maturity: final}\n---\n")
+    stated = {hit: request_of(contract.replace("HAPPENED", f"happened: {{hit: {{{then}: {hit}}}}}\n")
+                              + market(then, 100.0)) for hit in ("true", "false")}
+    time = (then - start).days / 365
+    rng = np.random.default_rng(5)
+    logs = (RATE - YIELD - VOL**2 / 2) * time + VOL * sqrt(time) * rng.standard_normal(240)
+    found = []
+    for number, (log_level, uniform) in enumerate(zip(logs, rng.random(240), strict=True)):
+        above, ends = log(100.0 / level), log_level + log(100.0 / level)
+        hit = ends <= 0.0 or uniform < exp(-2 * above * ends / (VOL**2 * time))
+        ready = on(stated["true" if hit else "false"], then, 100.0 * exp(log_level))
+        value = ready.price(256, SEED + number).mean * exp(-(RATE + SPREAD) * time)
+        found.append(value + paid_before(ready, start))
+    today = prepare(contract.replace("HAPPENED", "") + market(start, 100.0)).price(1 << 16, SEED)
+    error = np.std(found, ddof=1) / sqrt(len(found))
+    assert abs(np.mean(found) - today.mean) < 4 * sqrt(error**2 + today.error**2)
+    assert error < 0.01
 
 
 def paid_before(ready: Ready, start: date) -> float:
@@ -339,3 +465,32 @@ def test_history_under_cash_dividends_and_other_currencies(tmp_path, how: str):
     assert found.keys() == other.keys() and len(found) > 5
     for key, each in found.items():
         assert each.value == pytest.approx(other[key].value, rel=1e-9, abs=1e-12), key
+
+
+# The demo trades
+
+
+def test_day_400_of_a_memory_autocall():
+    """The first demo trade: two coupons paid, two missed and in memory, neither called nor knocked in."""
+    file = EXAMPLES / "seasoned_autocall.yaml"
+    state = mcx.readback(file).state
+    assert (date.fromisoformat(state.valuation) - date(2026, 11, 16)).days == 400
+    held = {(each.what, each.date): each.happened for each in state.past}
+    assert [held["coupon paid", day] for day in ("2027-02-16", "2027-05-17", "2027-08-16", "2027-11-16")] == [
+        "yes", "yes", "no", "no"]
+    assert held["called", "2027-11-16"] == "no" and state.ended == ""
+    assert {each.name: each.text for each in state.running} == {"hit": "no", "missed": "0.038"}
+    found = mcx.price(file, paths=1 << 14)
+    assert [each.date for each in found.ends][0] == "2028-02-16" and found.owed == ()
+
+
+def test_a_note_inside_its_averaging_period():
+    """The second: its initial level the lowest of three closes, seven of thirteen months fixed, the last of them on the
+    valuation date itself."""
+    file = EXAMPLES / "seasoned_asian_tail.yaml"
+    state = mcx.readback(file).state
+    dates = sorted({each.date for each in state.fixings})
+    assert len([day for day in dates if day < "2024"]) == 3
+    assert len([day for day in dates if day > "2027"]) == 7 and dates[-1] == state.valuation == "2027-12-01"
+    text = mcx.price(file, paths=64).assumptions
+    assert any("the observation on 2027-12-01, the valuation date, uses that day's fixing" in each for each in text)

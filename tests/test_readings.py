@@ -326,3 +326,57 @@ assets:
     close = next(each for each in found.readings if each.name == "barrier at each close")
     alone = price_of(text.replace("WATCHED", "{from: 2026-12-02, until: expiry, every: 1 business day}"), 2**16, SEED + 1)
     assert abs(close.price.value - alone.mean) < 4 * np.hypot(close.price.standard_error, alone.error)
+
+
+TOGETHER = """\
+payoff: together
+terms:
+  watched: {type: watch}
+  expiry:  {type: date}
+running:
+  fell: {ever: any(spot <= 80), at: watched}
+  low: {lowest: 'of(spot, north)', at: watched}
+let:
+  paid: 1 if fell else 0
+events:
+  - at: expiry
+    pay: paid
+readings:
+  - name: how far one fell
+    about: What the first asset fell at most.
+    let: {paid: 'max(1 - low / 100, 0)'}
+  - name: at its level only
+    about: The level itself counts.
+    running:
+      fell: {ever: any(spot <= 79), at: watched}
+---
+contract: Two assets
+currency: EUR
+units: 1
+assets: [north, south]
+payoff: together
+terms: {watched: {continuous: [0y, 1y]}, expiry: 1y}
+---
+market: 0y
+rates: {EUR: 2%}
+assets:
+  north: {spot: 100, currency: EUR, yield: 1%, vol: 20%}
+  south: {spot: 100, currency: EUR, yield: 1%, vol: 20%}
+correlation: {north/south: 50%}
+"""
+
+
+def test_readings_without_a_joint_law_are_refused_beside_the_contract():
+    """The contract weighs the chances of two assets, one reading draws an extreme of one of them: alone each has a law,
+    together the flags would have to be drawn as well, and their joint law is not known. That reading says so, with the
+    line; the contract and the other reading keep their laws and are valued."""
+    drawn = TOGETHER.replace("paid: 1 if fell else 0", "paid: max(1 - low / 100, 0)")
+    assert all(prepare(text).price(1 << 12, 21).mean > 0.0 for text in (TOGETHER, drawn))
+    values = valued(TOGETHER, 21, 1 << 12)
+    assert [one.name for one in values.refused] == ["how far one fell"]
+    assert "their joint law is not known; watch them on dates" in values.refused[0].faults[0].text
+    assert values.refused[0].faults[0].place.line == 6
+    (other,) = values.readings
+    assert other.name == "at its level only" and other.difference.value < 0.0
+    alone = prepare(TOGETHER).price(1 << 14, 22)
+    assert abs(values.price.value - alone.mean) < 4 * np.hypot(values.price.standard_error, alone.error)

@@ -70,6 +70,18 @@ def test_dividends_after_the_last_observation_have_no_effect():
           black(stripped((0.25, 2), (0.75, 3), (1, 7)) * exp(RATE), 90, 0.04))
 
 
+@pytest.mark.parametrize("paid", ["cash: 7", "share: 4%"])
+def test_the_spot_of_an_ex_date_is_without_its_dividend(paid: str):
+    """A dividend of the valuation date or earlier changes no digit; one of the day after does."""
+    text = ("contract: c\ncurrency: EUR\nunits: 1\nassets: [harbour]\nstart: 2026-11-02\nsettlement: 0 business days\n"
+            "calendar: {holidays: none, roll: following}\npayoff: european\n"
+            "terms: {side: call, strike: 100, expiry: 2027-12-01}\n---\nmarket: 2026-12-01\nrates: {EUR: 4%}\n"
+            f"assets: {{harbour: {{spot: 100, currency: EUR, vol: 20%, dividends: [{{ex: EX, {paid}}}, "
+            "{ex: 2027-05-03, cash: 2}]}}\n")
+    gone = [priced(text.replace("EX", ex), 2**10).mean for ex in ("2026-11-16", "2026-12-01", "2026-12-02")]
+    assert gone[0] == gone[1] > gone[2] + 1.0
+
+
 def test_a_date_on_which_no_level_is_read_is_no_observation():
     """A fixed amount paid later does not make later dividends count."""
     text = """

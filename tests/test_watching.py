@@ -191,18 +191,20 @@ events:
 """
 
 
-@pytest.mark.parametrize(("barrier", "dates"), [(85.0, 1), (99.0, 1), (92.0, 5)])
-def test_moments_follow_the_law_of_first_passage(barrier: float, dates: int):
+@pytest.mark.parametrize(("direction", "barrier", "dates"), [
+    ("down", 85.0, 1), ("down", 99.0, 1), ("down", 92.0, 5), ("up", 115.0, 1), ("up", 103.0, 5)])
+def test_moments_follow_the_law_of_first_passage(direction: str, barrier: float, dates: int):
     """The drawn times of the hit, in one step and in several, have the distribution function of the first passage of a
     Brownian motion with drift (Borodin & Salminen 2002, formula 2.2.0.2)."""
     market = MARKET.replace("rates: {EUR: 4%}", "rates: {EUR: 0%}")
-    text = MOMENT + document("moment", barrier=barrier, watched=ALWAYS, dates=f"{{count: {dates}, until: 1y}}") + market
-    paid = prepare(text, everything_drawn=True).by_path(40_000, SEED)["price"]
+    definition = MOMENT if direction == "down" else MOMENT.replace("<=", ">=")
+    text = document("moment", barrier=barrier, watched=ALWAYS, dates=f"{{count: {dates}, until: 1y}}")
+    paid = prepare(definition + text + market, everything_drawn=True).by_path(40_000, SEED)["price"]
     paid = paid[paid > 0.0]
     flat = {"spot": 100.0, "rate": 0.0, "dividend_yield": 0.015, "vol": 0.22}
-    ever = hit_by("down", barrier, maturity=1.0, **flat)
+    ever = hit_by(direction, barrier, maturity=1.0, **flat)
     assert abs(len(paid) / 40_000 - ever) < 4 * sqrt(ever / 40_000)
-    law = np.vectorize(lambda t: hit_by("down", barrier, maturity=t, **flat) / ever if t > 0.0 else 0.0)
+    law = np.vectorize(lambda t: hit_by(direction, barrier, maturity=t, **flat) / ever if t > 0.0 else 0.0)
     assert stats.kstest(paid, law).pvalue > 1e-3
 
 
@@ -307,7 +309,9 @@ events:
 
 @pytest.mark.parametrize(("old", "new", "assets", "words"), [
     ("", "", "[harbour]", "which of the two comes first is not known"),
-    ("{once: up}\n    then: [{pay: 1}, end]", "{once: out}\n    then: [{pay: 1}]", "[harbour]", "waits for several"),
+    ("{once: up}\n    then: [{pay: 1}, end]", "{once: out}\n    then: [{pay: 1}]", "[harbour]",
+     "'out' waits for the first exit from between two levels, and the law of its moment is not worked out; pay on a "
+     "date whether it came, which is exact ('- {at: expiry, if: out, then: [{pay: 1}]}'), or watch it on dates"),
     (", end]", "]", "[harbour, lantern]", "waits for several"),
 ])
 def test_hits_without_a_law_are_refused(old: str, new: str, assets: str, words: str):

@@ -13,7 +13,7 @@ from dataclasses import dataclass, field, replace
 
 from mcx.checked.day_count_names import day_count_name
 from mcx.checked.market import Curve, Node as Point, Quoted, RateConvention
-from mcx.checked.reading import check_keys, later_version, one_of, read, text_of, value_of
+from mcx.checked.reading import check_keys, one_of, read, text_of, value_of
 from mcx.checked.values import amount
 from mcx.faults import Fault
 from mcx.text.located import Mapping, Node, Scalar
@@ -24,6 +24,7 @@ DAYS = {"day": 1, "week": 7}
 LEAST_RATE, MOST_RATE = -0.5, 1.0
 MOST_VOL = 3.0
 MOST_DISCOUNT = 1.5
+STRIKES_WRITTEN = "'{strikes: {80%: {1y: 21%}, 100%: {1y: 18%}}, priced_at: 100%}'"
 COMPOUNDING = ("continuous", "annual", "simple")
 UNSAID = RateConvention()  # how rates are meant about which nothing is said
 FLAT_DAY_COUNTS = ("Actual/365 (Fixed)", "Actual/360")  # those by which a year is always as long
@@ -155,13 +156,17 @@ class MarketReader:
         elif name == "Actual/Actual (ICMA)":
             self.faults.append(expected("a day count of curves", node, f"{name} needs coupon periods"))
 
-    def curve_of(self, node: Mapping, form: str) -> Curve | None:
-        """Numbers by tenor or date, in order of time."""
+    def curve_of(self, node: Mapping, form: str, where: str = "") -> Curve | None:
+        """Numbers by tenor or date, in order of time; `where` (" of the strike '80%'") is for messages."""
         before = len(self.faults)
         points: list[Point] = []
         for label, value in node.entries:
-            if form == "vol" and isinstance(value, Mapping) and "value" not in value:
-                self.faults.append(later_version(label, "a vol by strike is a key"))
+            if form == "vol" and isinstance(value, Mapping) and "value" not in value and label.text != "strikes":
+                self.faults.append(expected("a vol", value, f"vols by strike go under {STRIKES_WRITTEN}"))
+                continue
+            if form == "vol" and label.text in ("strikes", "priced_at"):
+                text = "vols by strike are for assets; a rate of exchange has one vol for each tenor"
+                self.faults.append(Fault(label.place, text))
                 continue
             time, quoted = self.time(label), self.quoted(value, FORMS[form])
             if time is None or quoted is None:
@@ -174,7 +179,7 @@ class MarketReader:
         if not node.entries:
             self.faults.append(expected("a number, or numbers by tenor or date", node, "the curve is empty"))
         if form == "vol":
-            self._check_variance(points)
+            self._check_variance(points, where)
         return Curve(form, tuple(points), node.place) if len(self.faults) == before else None
 
     def time(self, label: Scalar) -> float | None:
@@ -221,13 +226,13 @@ class MarketReader:
             self.faults.append(expected("a tenor within the calendar's years", label))
             return None
 
-    def _check_variance(self, points: list[Point]) -> None:
-        """Total variance must not fall from one node to the next."""
+    def _check_variance(self, points: list[Point], where: str) -> None:
+        """Total variance must not fall from one node to the next; `where` is for the message."""
         for before, point in zip(points, points[1:], strict=False):
             held, total = (one.quoted.value**2 * one.time for one in (before, point))
             if total < held * (1 - 1e-12):
                 least = math.ceil(1e6 * math.sqrt(held / point.time)) / 1e4  # percent, rounded up
-                text = (f"total variance falls from {held:.6g} at '{before.label}' to {total:.6g} at "
+                text = (f"total variance{where} falls from {held:.6g} at '{before.label}' to {total:.6g} at "
                         f"'{point.label}'; a vol of {least:.4f}% is the least that '{point.label}' can have")
                 self.faults.append(Fault(point.quoted.place, text))
 

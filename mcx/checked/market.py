@@ -110,9 +110,23 @@ class FxMarket:
 
 
 @dataclass(frozen=True, slots=True)
+class StrikeVols:
+    """Black vols by strike: a curve for each strike, in rising order, all with the same tenors. Strikes are shares of
+    the spot (`relative`) or levels in the asset's currency; so is `priced_at`, the strike whose vols price a contract.
+    """
+
+    strikes: tuple[float, ...]
+    curves: tuple[Curve, ...]
+    relative: bool
+    priced_at: float
+    place: Place
+
+
+@dataclass(frozen=True, slots=True)
 class AssetMarket:
     """One asset: spot, currency ('' where not stated), vol, and what its level gives up: a yield curve, dividends, or
-    forwards that say it; nothing at all where it is a `total_return` index, but for a decrement."""
+    forwards that say it; nothing at all where it is a `total_return` index, but for a decrement. Where vols are given
+    `by_strike`, `vol` is the curve of the strike that they are `priced_at`."""
 
     name: str
     spot: Quoted
@@ -126,6 +140,7 @@ class AssetMarket:
     total_return: bool = False
     decrement: Decrement | None = None
     quanto: Quanto | None = None
+    by_strike: StrikeVols | None = None
 
 
 @dataclass(frozen=True, slots=True)

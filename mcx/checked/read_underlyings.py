@@ -10,12 +10,13 @@ import re
 from mcx.checked.curves import MarketReader, correlation
 from mcx.checked.market import AssetMarket, Blend, Decrement, Dividend, FxMarket, Quanto
 from mcx.checked.reading import check_keys, items_of, one_of, read, value_of
+from mcx.checked.strike_vols import priced_curve, read_strike_vols
 from mcx.checked.values import amount, asset_name, currency_code
 from mcx.faults import Fault
 from mcx.text.located import Mapping, Node, Scalar
 from mcx.text.scalars import DATE, date, expected, percent, time
 
-LATER = ("borrow", "strikes", "skew")
+LATER = ("borrow", "skew")
 UNDERLYINGS = ("price", "total return")
 GIVEN_UP = ("yield", "dividends", "forwards")  # what a total-return index does not give up
 FX = re.compile("([A-Z]{3}) per ([A-Z]{3})")
@@ -35,9 +36,12 @@ def read_asset(reader: MarketReader, name: Scalar, node: Node) -> AssetMarket | 
                what, LATER)
     kind = one_of(node.get("underlying"), UNDERLYINGS, faults, "an underlying") if "underlying" in node else "price"
     _check_what_is_given_up(node, kind == "total return", faults, what)
-    curves = {key: reader.curve(node.get(key), form)
-              for key, form in (("vol", "vol"), ("yield", "zero"), ("forwards", "forward")) if key in node}
     spot = reader.quoted(node.get("spot"), amount) if "spot" in node else None
+    smiles = isinstance(node.get("vol"), Mapping) and "strikes" in node.get("vol")
+    by_strike = read_strike_vols(reader, node.get("vol"), spot) if smiles else None
+    curves = {key: reader.curve(node.get(key), form)
+              for key, form in (("vol", "vol"), ("yield", "zero"), ("forwards", "forward"))
+              if key in node and not (smiles and key == "vol")}
     currency = read(node, "currency", currency_code, faults) or ""
     dividends = _dividends(reader, node.get("dividends"))
     blend = _blend(reader, node.get("dividend_blend")) if "dividend_blend" in node else None
@@ -46,9 +50,9 @@ def read_asset(reader: MarketReader, name: Scalar, node: Node) -> AssetMarket | 
     if len(faults) > before:
         return None
     return AssetMarket(
-        name.text, spot, currency, curves["vol"], name.place, dividend_yield=curves.get("yield"),
-        forwards=curves.get("forwards"), dividends=dividends, blend=blend, total_return=kind == "total return",
-        decrement=decrement, quanto=quanto)
+        name.text, spot, currency, priced_curve(by_strike) if by_strike else curves["vol"], name.place,
+        dividend_yield=curves.get("yield"), forwards=curves.get("forwards"), dividends=dividends, blend=blend,
+        total_return=kind == "total return", decrement=decrement, quanto=quanto, by_strike=by_strike)
 
 
 def read_fx(reader: MarketReader, name: Scalar, node: Node) -> FxMarket | None:

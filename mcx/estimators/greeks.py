@@ -47,8 +47,8 @@ NEAR = 1.0 / 12.0  # years
 NEARBY = 0.01  # of the spots
 ESTIMATORS = ("auto", "pathwise", "likelihood", "mixed")
 REVALUATION = "revaluation"
-AS_ONE = ("assets that move as one are watched together: moved alone its vol would part them, and then of their joint law "
-          "only bounds are known")
+AS_ONE = ("assets that move as one are watched together: moved alone its vol would part them, and then of their joint "
+          "law only bounds are known; a grid of vol moves takes all along")
 
 
 @dataclass(frozen=True, slots=True)

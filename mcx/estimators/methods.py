@@ -168,7 +168,7 @@ def joint_extremes(tape: Tape) -> str:
     place = next((step.place for step in tape.instructions if step.op is Op.BRIDGE_RANGE), None)
     if any(step.op is Op.BRIDGE_RANGE for step in tape.instructions):
         return (f"the lowest and the highest level of one asset are drawn together{f' at {place}' if place else ''}, "
-                f"and the score of their joint law is not taken")
+                f"and the score of their joint law is not taken; a revaluation gives a value (bump, as in --bump 1%)")
     return ""
 
 

@@ -9,8 +9,10 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from mcx.estimators.batches import Sampling
 from mcx.estimators.bracket import PILOT, Refinement, refine
 from mcx.estimators.estimate import NORMAL_95, Estimate
+from mcx.estimators.model_bracket import ModelBracket, model_bracket
 from mcx.estimators.pace import announce, pace
 from mcx.estimators.plan import GROUP, Plan, Precision, plan, whole_groups
 from mcx.estimators.ready import Ready, made
@@ -34,7 +36,8 @@ class Valuation:
     outputs and results belong together, price first; `stages` is the price at a quarter, half and all of the paths;
     `seconds` the time of the main run; `reduction` the methods of variance reduction, `notes` what they found;
     `hedge`, where gains of a hedge are among them, what a hedger is left with; `ready` the contract as it was run, with
-    refined steps; `refinement` how fine these are, where the price lies between bounds.
+    refined steps; `refinement` how fine these are, where the price lies between bounds; `model` how far the price may
+    lie elsewhere under vols by strike, None where the market states none.
     """
 
     outputs: tuple[Output, ...]
@@ -49,6 +52,7 @@ class Valuation:
     notes: tuple[str, ...] = ()
     hedge: tuple[Residual, ...] = ()
     refinement: Refinement | None = None
+    model: ModelBracket | None = None
 
     @property
     def price(self) -> Estimate:
@@ -86,9 +90,16 @@ def value(
     if ready.unrolled.bracketed:
         ready, refinement = _refined(ready, asked, seed, threads, pieces)
     case = Case(ready, seed, threads)
-    scheme = best(case) if reduction == (AUTO,) else scheme_of(case, reduction)
+    scheme = best(case, asked) if reduction == (AUTO,) else scheme_of(case, reduction)
     found = sampled(ready, scheme, asked, seed=seed, threads=threads, progress=progress, notice=notice)
-    return replace(found, refinement=refinement, hedge=residuals(case) if HEDGE.name in scheme.names else ())
+    found = replace(found, refinement=refinement, hedge=residuals(case) if HEDGE.name in scheme.names else ())
+    if found.interrupted:
+        return found
+    try:
+        return replace(found, model=model_bracket(ready, ready.market.market, Sampling(
+            seed, found.price.paths, threads=threads, notice=notice)))
+    except KeyboardInterrupt:
+        return replace(found, interrupted=True)
 
 
 def sampled(ready: Ready, scheme: Scheme, asked: Precision, *, seed: int, threads: int | None = None,

@@ -20,6 +20,7 @@ from mcx.estimators.estimate import Estimate
 from mcx.estimators.footing import Footing, footing, reference_shifts
 from mcx.estimators.levers import Lever, alone, levers
 from mcx.estimators.margin import Margin, day_one_margin
+from mcx.estimators.model_bracket import ModelBracket, model_bracket
 from mcx.estimators.plan import Precision
 from mcx.estimators.price import Valuation, value
 from mcx.estimators.ready import Ready
@@ -36,11 +37,13 @@ DIRECTIONS = 3  # times that the direction of the smallest joint move is found a
 FURTHEST = 3.0  # a joint move is looked for this many times as far as to first order
 CLEAR = 4.0  # a reading closes the gap where what is left is within this many errors, or within the dealer's own width
 SAMPLING, BID_OFFER, INPUTS, TOLERANCE = "sampling error", "half the bid-offer", "input band", "tolerance"
+MODEL = "model bracket"
 
 
 @dataclass(frozen=True, slots=True)
 class Band:
-    """A half-width, in the unit of the price, and whether it holds the gap; None where it was not stated."""
+    """A half-width, in the unit of the price, and whether it holds the gap; None where it was not stated. Of the model
+    bracket, which does not lie evenly about the price: how far it reaches towards the quote."""
 
     name: str
     half_width: float | None
@@ -84,7 +87,8 @@ class Money:
 
 @dataclass(frozen=True, slots=True)
 class Verification:
-    """Everything about one quote. `compared` is our price at the quote's spots; `gap` the quote less that."""
+    """Everything about one quote. `compared` is our price at the quote's spots, `model` the bracket about it where the
+    market states vols by strike; `gap` the quote less `compared`."""
 
     quote: DealerQuote
     footing: Footing
@@ -102,6 +106,7 @@ class Verification:
     money: Money
     solved: Solved | None
     seconds: float
+    model: ModelBracket | None = None
 
     def left(self, reading: ReadingValue) -> Estimate:
         """The quote less the price in a reading."""
@@ -157,6 +162,8 @@ class Bench:
         band = root_of_squares(there.effects) if there.effects else None
         bands = tuple(_band(name, width, gap.value) for name, width in (
             (SAMPLING, gap.half_width), (BID_OFFER, foot.half_width), (INPUTS, band), (TOLERANCE, quote.tolerance)))
+        if there.model is not None:
+            bands = (*bands, model_band(there.model, gap.value))
         far = corner(self.revaluer, there.market, there.effects, gap.value, self.sampling) if there.effects else None
         threshold = max(foot.half_width or 0.0, quote.tolerance or 0.0)
         closing = self.closing(there, gap, meets, threshold)
@@ -167,7 +174,8 @@ class Bench:
         return Verification(
             quote, foot, self.valuation, there.price, gap, bands, there.effects, there.unstated, far,
             tuple(there.implied(lever, meets) for lever in there.levers if lever.kind not in NOT_MOVED),
-            there.joint(meets), there.readings, closing, self._money(quote), solved, time.perf_counter() - begun)
+            there.joint(meets), there.readings, closing, self._money(quote), solved, time.perf_counter() - begun,
+            there.model)
 
     def closing(self, there: Compared, gap: Estimate, meets: float, threshold: float) -> tuple[str, ...]:
         """The readings in which an open gap would not be there; up to `threshold` nobody calls it one."""
@@ -195,6 +203,13 @@ class Compared:
     @cached_property
     def effects(self) -> tuple[Effect, ...]:
         return effects(self.bench.revaluer, self.market, tuple(alone(self.levers)), self.bench.sampling, self.parts)
+
+    @cached_property
+    def model(self) -> ModelBracket | None:
+        """How far vols by strike leave the price open; a strike in percent goes along with a spot."""
+        if self.market == self.bench.market:
+            return self.bench.valuation.model
+        return model_bracket(self.bench.ready, self.market, self.bench.sampling)
 
     @cached_property
     def unstated(self) -> tuple[Lever, ...]:
@@ -258,6 +273,15 @@ class Compared:
 
 def _band(name: str, half_width: float | None, gap: float) -> Band:
     return Band(name, half_width, None if half_width is None else abs(gap) <= half_width)
+
+
+def model_band(model: ModelBracket, gap: float) -> Band:
+    """How far the model bracket reaches from the headline price towards a quote, and whether the quote is inside it: it
+    may lie beside the headline price altogether."""
+    if not model.changes:
+        return Band(MODEL, None, None)
+    low, high = model.low.value, model.high.value
+    return Band(MODEL, max(high if gap >= 0.0 else -low, 0.0), low <= gap <= high)
 
 
 def _closes(gap: Estimate, left: Estimate, threshold: float) -> bool:

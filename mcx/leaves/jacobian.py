@@ -157,7 +157,10 @@ def _asset(asset: AssetMarket, by: Shifts) -> AssetMarket:
 
     dividends = tuple(replace(each, cash=shifted(each.cash, "dividend", each.label),
                               share=shifted(each.share, "dividend share", each.label)) for each in asset.dividends)
-    decrement, quanto = asset.decrement, asset.quanto
+    decrement, quanto, by_strike = asset.decrement, asset.quanto, asset.by_strike
+    if by_strike is not None:  # every strike moves as the one that prices the contract
+        curves = tuple(_curve(curve, by, "vol", asset.name) for curve in by_strike.curves)
+        by_strike = replace(by_strike, curves=curves)
     if decrement is not None:
         kind = "decrement points" if decrement.points else "decrement"
         decrement = replace(decrement, quoted=shifted(decrement.quoted, kind, ""))
@@ -165,7 +168,7 @@ def _asset(asset: AssetMarket, by: Shifts) -> AssetMarket:
         quanto = replace(quanto, fx_vol=_curve(quanto.fx_vol, by, "fx vol", asset.name),
                          fx_correlation=shifted(quanto.fx_correlation, "fx correlation", ""))
     return replace(asset, spot=spot, dividends=dividends, decrement=decrement, quanto=quanto,
-                   vol=_curve(asset.vol, by, "vol", asset.name), forwards=forwards,
+                   by_strike=by_strike, vol=_curve(asset.vol, by, "vol", asset.name), forwards=forwards,
                    dividend_yield=_curve(asset.dividend_yield, by, "yield", asset.name))
 
 

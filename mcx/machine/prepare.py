@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections import deque
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from functools import cache
 
 import numpy as np
 
@@ -110,6 +111,15 @@ def _read_once(lines: Sequence[tuple[Op, int, tuple[int, ...]]], program: Progra
         if row in writer:
             reads[writer[row]] += 1
     return {number for number, count in enumerate(reads) if count == 1}
+
+
+@cache
+def _form_of(op: Op, scalar: tuple[bool, ...]) -> tuple[Form, frozenset[int]]:
+    """The form that takes these operands, each a scalar or not, with the fewest scalars filled into rows; and which."""
+    scalars = {position for position, is_scalar in enumerate(scalar) if is_scalar}
+    wanted = {form: {k for k, kind in enumerate(kinds(form)) if kind == "S"} for form in FORMS[op]}
+    form = min((f for f in wanted if wanted[f] <= scalars), key=lambda f: len(scalars - wanted[f]))
+    return form, frozenset(scalars - wanted[form])
 
 
 class _Writer:
@@ -237,10 +247,7 @@ class _Writer:
 
     def choose(self, op: Op, to: int, *sources: int) -> None:
         """Emit the form that takes these operands with the fewest scalars filled into rows."""
-        scalars = {position for position, source in enumerate(sources) if source < 0}
-        wanted = {form: {k for k, kind in enumerate(kinds(form)) if kind == "S"} for form in FORMS[op]}
-        form = min((f for f in wanted if wanted[f] <= scalars), key=lambda f: len(scalars - wanted[f]))
-        filled = scalars - wanted[form]
+        form, filled = _form_of(op, tuple(source < 0 for source in sources))
         self.emit(form, to, *[self.filled(v) if k in filled else v for k, v in enumerate(sources)])
 
     def emit(self, form: Form, to: int, *sources: int) -> None:

@@ -60,10 +60,15 @@ def nanoseconds(code: KernelCode) -> float:
 
 def cost(program: Program, plan: DrawPlan = PLAIN) -> float:
     """The cost of one path of a program, to compare programs and plans with."""
+    return nanoseconds(prepare(program)) + plan_cost(program, plan)
+
+
+def plan_cost(program: Program, plan: DrawPlan) -> float:
+    """What a path costs more by a plan of draws."""
     drawn = _NET * program.draws if plan.scrambles else 0.0
     if plan.order is not None:
         drawn += _TURN * len(plan.order.pairs) + _BEND * (program.normals if plan.order.left.size else 0)
-    return nanoseconds(prepare(program)) + drawn
+    return drawn
 
 
 def op_costs(tape: Tape) -> np.ndarray:

@@ -6,11 +6,13 @@ import math
 from collections.abc import Iterator
 
 from mcx.checked.formula import Previous, walk
-from mcx.checked.market import Curve, Market
+from mcx.checked.market import Curve, Market, StrikeVols
+from mcx.checked.strike_vols import shown_strike
 from mcx.dates.dated_contract import DatedContract
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.price import Valuation
 from mcx.leaves.market_map import MarketMap
+from mcx.leaves.smile import butterflies
 from mcx.report.results import Martingale
 from mcx.report.settled import Settled, right_sides
 from mcx.report.underlyings import underlyings
@@ -19,6 +21,11 @@ from mcx.tape.program import Tape
 
 FEW_PATHS = 100
 LARGE_Z = 4.0
+
+
+def vol_warnings(market: Market, market_map: MarketMap) -> Iterator[str]:
+    """Vols by strike that fit no law: warned of, since quotes of several sources often do not."""
+    yield from butterflies(market, market_map.contract, market_map)
 
 
 def warnings(valuation: Valuation, tape: Tape, martingale: tuple[Martingale, ...], met: bool | None) -> Iterator[str]:
@@ -83,6 +90,8 @@ def assumptions(dated: DatedContract, market: Market, market_map: MarketMap) -> 
                        "forward spread"))
     for name in contract.assets:
         asset = market.assets[name]
+        if asset.by_strike is not None:
+            yield _by_strike(name, asset.by_strike)
         curves.append((f"the vols of {name}", asset.vol, end, "vol"))
         quanto = asset.quanto if contract.conversion.get(name) == "quanto" else None
         drifts = ((asset.dividend_yield, "yields", "forward yield"), (asset.forwards, "forwards", "growth"),
@@ -99,16 +108,26 @@ def assumptions(dated: DatedContract, market: Market, market_map: MarketMap) -> 
             yield f"{what} end at {curve.nodes[-1].label}; the last {held} is held to {day}"
 
 
+def _by_strike(name: str, vols: StrikeVols) -> str:
+    low, high, own = (shown_strike(vols, strike) for strike in (vols.strikes[0], vols.strikes[-1], vols.priced_at))
+    moves = "a strike in percent goes along where a spot moves" if vols.relative else "strikes stay where a spot moves"
+    return (f"the price takes the vols of {name} at {own}, as its market says; vols are linear in strike between the "
+            f"strikes given, flat below {low} and above {high}; the headline's vol stays as it is and {moves}")
+
+
 def _ends_before(curve: Curve, time: float) -> bool:
     return not curve.flat and curve.nodes[-1].time < time - 1e-9
 
 
-def limits(dated: DatedContract) -> Iterator[str]:
-    """What the model leaves out, as far as it touches this contract."""
+def limits(dated: DatedContract, model_bracket: bool = False) -> Iterator[str]:
+    """What the model leaves out, as far as it touches this contract; `model_bracket`: vols by strike show how far."""
     contract, settled = dated.contract, Settled(dated.contract)
     yield ("risk-neutral lognormal levels with one vol for each asset and tenor: no skew, no stochastic vol, no jumps; "
            "rates, yields and dividends are known in advance")
-    if _turns(settled):
+    if model_bracket:
+        yield ("the model bracket is how far vols by strike leave the price open; one vol for each asset and tenor "
+               "cannot do better: neither more paths nor better inputs decide what lies inside it")
+    elif _turns(settled):
         yield ("under skew the levels where this contract turns have vols of their own: price it with their vol too, "
                "and read the two as a bracket")
     if _looks_back(settled):

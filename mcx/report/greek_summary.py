@@ -14,7 +14,7 @@ from mcx.report.cautions import assumptions, cautions, limits
 from mcx.report.greek_results import AssetDelta, Greek, GreeksResult, GridPoint, Jump, Refused, Rung
 from mcx.report.plausible import implausible
 from mcx.report.results import Planned
-from mcx.report.state import standing
+from mcx.report.state import doubted, standing
 from mcx.report.summary import NO_REDUCTION, bracket
 
 CLEAR = 2.0  # a value below this many errors is not resolved
@@ -56,7 +56,8 @@ def greeks_result(ready: Ready, market: Market, wish: Wish, found: Found) -> Gre
         jumps=tuple(Jump(jump.kind, str(jump.place or "")) for jump in found.jumps),
         ladder=tuple(_rung(step, assets, contract.size) for step in found.ladder),
         grid=tuple(_point(point, contract.size) for point in found.grid),
-        warnings=(*_warnings(found), *implausible(dated, ready.market)),
+        warnings=(*_warnings(found), *implausible(dated, ready.market),
+                  *doubted(dated, ready.unrolled.state, ready.market)),
         assumptions=tuple(dict.fromkeys(
             (*standing(ready), *assumptions(dated, market, ready.market), *CONVENTIONS))),
         limits=tuple(limits(dated)),

@@ -7,6 +7,7 @@ with them the numbers of paths, differ from run to run.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import ClassVar
 
 from mcx.report.results import Result
 
@@ -25,11 +26,12 @@ class MethodLine(Result):
     """One choice of methods.
 
     `variance_ratio` is plain sampling's variance over this one's at equal paths, with its own standard error;
-    `cost_ratio` this one's time for a path over plain sampling's; `efficiency` the first over the second: how much
-    longer plain sampling takes to the same error. `z` is the distance from all others pooled, `z_closed_form` from the
-    closed form, None where there is none, both in standard errors. `paths_to_1bp` and `seconds_to_1bp` bring the 95 %
-    half-width to 1 bp of the notional (of the price, for units), if the error shrinks as the root of the paths grows.
-    Ratios are None for an exact result.
+    `cost_ratio` this one's processor time for a path over plain sampling's, the median of runs in pairs; `efficiency`
+    the first over the second: how much longer plain sampling takes to the same error. `z` is the distance from all
+    others pooled, `z_closed_form` from the closed form, None where there is none, both in standard errors.
+    `paths_to_1bp` and `seconds_to_1bp` bring the 95 % half-width to 1 bp of the notional (of the price, for units), if
+    the error shrinks as the root of the paths grows.
+    Ratios are None for an exact result, which needs 0 paths.
     """
 
     method: str
@@ -61,6 +63,7 @@ class NotApplied(Result):
 class MethodsResult(Result):
     """Which variance reduction pays on a contract: `mcx methods`. `methods` are sorted by efficiency."""
 
+    MAIN: ClassVar[str] = "methods"
     contract: str
     payoff: str
     currency: str
@@ -82,3 +85,7 @@ class MethodsTable(Result):
     """Several contracts."""
 
     contracts: tuple[MethodsResult, ...]
+
+    def rows(self) -> list[dict]:
+        """The choices of all contracts."""
+        return [{"contract": each.contract, **row} for each in self.contracts for row in each.rows()]

@@ -43,10 +43,9 @@ def methods_result(ready: Ready, market: Market, found: Sequence[Compared], refu
 
 
 def _line(one: Compared, plain: Compared, z: float, truth: float | None, unit: float) -> MethodLine:
-    cost = (one.seconds / one.price.paths) / (plain.seconds / plain.price.paths)
     ratio = None if one.exact else plain.variance / one.variance
     itself = one is plain
-    wanted = (one.price.half_width / unit) ** 2 if unit else 0.0
+    wanted = (one.price.half_width / unit) ** 2 if unit and not one.exact else 0.0
     return MethodLine(
         method=one.scheme.label,
         price=one.price.value,
@@ -55,8 +54,8 @@ def _line(one: Compared, plain: Compared, z: float, truth: float | None, unit: f
         seconds=one.seconds,
         variance_ratio=ratio,
         variance_ratio_error=None if ratio is None else 0.0 if itself else ratio * math.hypot(one.doubt, plain.doubt),
-        cost_ratio=cost,
-        efficiency=None if ratio is None else ratio / cost,
+        cost_ratio=one.cost,
+        efficiency=None if ratio is None else ratio / one.cost,
         z=z,
         z_closed_form=None if truth is None else 0.0 if one.exact else one.price.z(truth),
         paths_to_1bp=wanted * one.price.paths,

@@ -4,8 +4,11 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
+from mcx.estimators.reduction.names import NONE
 from mcx.report.method_results import MethodLine, MethodsResult
 from mcx.report.terminal import Page, decimals, fixed
+
+HEADS = ("methods", "std error", "z", "variance ratio", "cost", "efficiency", "to 1 bp")
 
 
 def show_methods(result: MethodsResult, page: Page) -> None:
@@ -15,35 +18,58 @@ def show_methods(result: MethodsResult, page: Page) -> None:
     page.line(f"{result.contract} ({result.payoff})", style="bold")
     page.line(f"seed {result.seed}; each choice for {result.each}")
     page.heading("variance reduction, the most efficient first")
-    page.table(("methods", unit, "std error", "z", "variance ratio", "cost", "efficiency", "to 1 bp"),
-               (_row(line, factor, percent) for line in result.methods))
-    page.line("variance ratio: of plain sampling over this, at equal paths, ± its standard error; cost: time for a path "
-              "over that of plain sampling; efficiency: variance × time of plain sampling over this; z: distance from "
-              "all others pooled; to 1 bp: seconds until the 95 % half-width is 1 bp of the "
-              + ("notional" if percent else "price"))
+    page.table((HEADS[0], unit, *HEADS[1:]), (method_row(line, factor, percent) for line in result.methods))
+    page.line(explained(percent))
     if result.closed_form is not None:
-        page.line(f"closed form: {fixed(factor * result.closed_form, 8)} {unit}; z against it: " + ", ".join(
-            f"{line.method} {line.z_closed_form:+.2f}" for line in result.methods if line.efficiency is not None))
-    noted = [f"{line.method}: {note}" for line in result.methods for note in line.notes]
-    refused = [f"{one.method}: {one.reason}" for one in result.not_applied]
-    for title, texts in (("what they found", noted), ("not applicable", refused), ("assumptions", result.assumptions),
+        page.line(against_closed_form(result, factor, unit))
+    for title, texts in (("what they found", found(result)), ("not applicable", refused(result)),
+                         ("assumptions", result.assumptions),
                          ("not in the model", result.limits), ("read it with care", result.cautions)):
         if texts:
             page.heading(title)
             page.items(texts)
 
 
-def _row(line: MethodLine, factor: float, percent: bool) -> Iterator[str]:
+def explained(percent: bool) -> str:
+    """What the columns mean."""
+    return ("variance ratio: of plain sampling over this, at equal paths, ± its standard error; cost: processor time "
+            "for a path over that of plain sampling; efficiency: variance × time of plain sampling over this; z: distance "
+            "from all others pooled; to 1 bp: seconds until the 95 % half-width is 1 bp of the "
+            + ("notional" if percent else "price"))
+
+
+def against_closed_form(result: MethodsResult, factor: float, unit: str) -> str:
+    return f"closed form: {fixed(factor * result.closed_form, 8)} {unit}; z against it: " + ", ".join(
+        f"{line.method} {line.z_closed_form:+.2f}" for line in result.methods if line.efficiency is not None)
+
+
+def found(result: MethodsResult) -> list[str]:
+    """What the choices found on their pilots, those that found the same together."""
+    said: dict[str, list[str]] = {}
+    for line in result.methods:
+        notes = "; ".join(note.removeprefix(f"{line.method}: ") for note in line.notes)
+        if notes:
+            said.setdefault(notes, []).append(line.method.replace(",", " + "))
+    return [f"{', '.join(methods)}: {notes}" for notes, methods in said.items()]
+
+
+def refused(result: MethodsResult) -> list[str]:
+    """Choices that have nothing to offer, and why."""
+    return [f"{one.method.replace(',', ' + ')}: {one.reason}" for one in result.not_applied]
+
+
+def method_row(line: MethodLine, factor: float, percent: bool) -> Iterator[str]:
     error = factor * line.standard_error
     places = min(decimals(error, 2, 2 if percent else 4), 8)
     yield line.method.replace(",", ", ")
     yield fixed(factor * line.price, places)
     yield f"{error:.2g}" if line.efficiency is not None else "exact"
     yield f"{line.z:+.2f}"
-    yield "" if line.variance_ratio is None else f"{_short(line.variance_ratio)} ± {_short(line.variance_ratio_error)}"
+    yield "" if line.variance_ratio is None else "1" if line.method == NONE else (
+        f"{_short(line.variance_ratio)} ± {_short(line.variance_ratio_error)}")
     yield f"{line.cost_ratio:.2f}"
     yield "" if line.efficiency is None else _short(line.efficiency)
-    yield f"{line.seconds_to_1bp:.2g}"
+    yield "" if line.efficiency is None else f"{line.seconds_to_1bp:.2g}"
 
 
 def _short(number: float) -> str:

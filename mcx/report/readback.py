@@ -28,7 +28,7 @@ from mcx.report.results import (
     WatchLine,
 )
 from mcx.report.settled import Settled, right_sides
-from mcx.report.state import state_view
+from mcx.report.state import doubted, state_view
 from mcx.report.underlyings import underlyings
 from mcx.report.wording import Words, days, joined, period
 from mcx.tape.steps import PLAIN
@@ -67,7 +67,8 @@ def readback(dated: DatedContract, market: Market | None, path: PathResult | Non
         events=tuple(event_line(event, dated, words, settled) for event in contract.payoff.events),
         watches=tuple(_watches(dated, settled, unrolled)),
         dates=tuple(_dates(dated, words, settled)),
-        warnings=tuple(implausible(dated, market_map)),
+        warnings=(*implausible(dated, market_map),
+                  *(doubted(dated, unrolled.state, market_map) if market_map else ())),
         assumptions=(*dated.assumptions, *(underlyings(dated, market_map) if market_map else ())),
         quotes=tuple(quotes(market_map)) if market_map else (),
         market=tuple(_market(dated, market_map)) if market_map else (),

@@ -73,6 +73,9 @@ def _state(state: StateView, page: Page) -> None:
     if state.past:
         page.table(("date", "what", "happened"), (
             (each.date, each.what, each.happened) for each in state.past), words=3)
+    if state.stated:
+        page.heading("stated by the contract, not computed: as of the close of the date")
+        page.table(("date", "what", "value"), ((each.date, each.what, each.value) for each in state.stated), words=2)
     if state.fixings:
         _fixings(state.fixings, page)
     if state.running:

@@ -32,7 +32,7 @@ REQUEST = {  # what a result repeats of its request, by verb
 CLOSE = 1e-12  # relative, on another type of processor
 # How long it took, how the number of paths was found, and what is worded: sentences change with versions.
 NOT_COMPARED = ("seconds", "planned", "target", "reached", "verdict", "leads", "text", "about", "note", "choices",
-                "reduction_notes", "warnings", "assumptions", "limits", "cautions", "calendar_version")
+                "reduction_notes", "warnings", "assumptions", "limits", "cautions", "indicative", "calendar_version")
 
 
 def environment() -> dict[str, str]:

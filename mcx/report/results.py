@@ -40,8 +40,11 @@ class Result:
 
     def to_frame(self) -> DataFrame:
         """The rows as a pandas DataFrame; raises ImportError where pandas is not installed."""
-        from pandas import DataFrame
-
+        try:
+            from pandas import DataFrame
+        except ImportError:
+            raise ImportError("a frame needs the package 'pandas', which is not installed; rows() gives the same as "
+                              "plain dicts") from None
         return DataFrame(self.rows())
 
     def _repr_html_(self) -> str | None:
@@ -199,9 +202,10 @@ class PriceResult(Result):
     """What a contract is worth: `mcx price`.
 
     `notional` or `units` is None. `bracket` is None but where the price is the middle of two bounds; `interval95` is
-    about sampling alone. `valuation` is None for textbook markets. `ends` holds how often the contract ended
-    early on each date, `reached_maturity` how often it did not, and `expected_life` the years to the payment that ends
-    it. `reduction` lists the methods of variance reduction, 'none' without, `reduction_notes` what they found;
+    about sampling alone. `model_bracket` (a `ModelBracketResult`) is None but where vols are given by strike.
+    `valuation` is None for textbook markets. `ends` holds how often the contract ended early on each date,
+    `reached_maturity` how often it did not, and `expected_life` the years to the payment that ends it. `reduction`
+    lists the methods of variance reduction, 'none' without, `reduction_notes` what they found;
     `paths` counts both paths of a pair. `hedge` is empty unless gains of a hedge are among the methods. `owed` are
     amounts that fixings have settled and that are not yet paid; they are part of the price, which is dirty: `accrued` is
     the interest of certain coupons in their running period, and `clean` the price less that. `ended` is the date on which
@@ -221,6 +225,7 @@ class PriceResult(Result):
     standard_error: float
     interval95: tuple[float, float]
     bracket: Bracket | None
+    model_bracket: Result | None
     value: float
     value_standard_error: float
     paths: int
@@ -395,6 +400,10 @@ class ReadbackTable(Result):
     """Several contracts."""
 
     readbacks: tuple[Readback, ...]
+
+    def rows(self) -> list[dict]:
+        """The dates of all contracts."""
+        return [{"contract": each.contract, **row} for each in self.readbacks for row in each.rows()]
 
 
 @dataclass(frozen=True, slots=True)

@@ -12,7 +12,7 @@ from mcx.leaves.market_map import WEEKLY, MarketMap
 from mcx.report.distances import distances
 from mcx.report.events import event_label
 from mcx.report.results import Owed, Payment, Sentence
-from mcx.report.state_results import Fixed, PastLine, StateView
+from mcx.report.state_results import Fixed, PastLine, StatedLine, StateView
 from mcx.report.wording import figure, joined
 from mcx.tape.state import State
 
@@ -59,6 +59,19 @@ def standing(ready: Ready) -> Iterator[str]:
     yield f"the contract ended on {state.ended}, by its fixings: {left}"
 
 
+def doubted(dated: DatedContract, state: State, market: MarketMap) -> Iterator[str]:
+    """Statements that nothing was reached by the end of the valuation date where today's level says that it was."""
+    scale = dated.history.scale or (1.0,) * len(dated.contract.assets)
+    for claim in state.denied:
+        for line in sorted(claim.lines, key=lambda line: (line.asset, line.op, line.level)):
+            asset = dated.contract.assets[line.asset]
+            today = market.forward(asset, 0.0) * scale[line.asset]
+            if line.reached(today):
+                yield (f"{claim.words}, but today's level of {asset}, {figure(today)}, has reached "
+                       f"{figure(line.level)}: the contract is valued as reached today; check the spot, or the "
+                       "statement")
+
+
 def _dividends_watched(ready: Ready) -> Iterator[str]:
     """Assets whose cash dividends make the law of a continuous watch nearly exact, with the longest step."""
     steps = ready.market.makeup().cash
@@ -88,6 +101,8 @@ def state_view(dated: DatedContract, state: State, market: MarketMap) -> StateVi
         fixings=tuple(_fixings(dated, state)),
         past=tuple(PastLine(str(each.day), event_label(each.event), _held(each.held))
                    for each in state.events if each.event.condition is not None or each.event.name),
+        stated=tuple(StatedLine(str(date), name, _values(dated, name, (known.value,)))
+                     for name, dates in contract.happened.items() for date, known in sorted(dates.items())),
         paid=tuple(Payment(str(each.due), each.pay.leg, each.amount, each.amount * contract.size) for each in paid),
         owed=owed_amounts(dated, state, market),
         to_deliver=tuple(to_deliver(dated, state)),

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import ClassVar
 
 from mcx.report.results import Owed, Payment, Result, Sentence
 
@@ -14,6 +15,15 @@ class Fixed(Result):
     date: str
     asset: str
     level: float
+
+
+@dataclass(frozen=True, slots=True)
+class StatedLine(Result):
+    """What the contract states of a watch as of the close of a date, not computed: 'yes', 'no' or a level."""
+
+    date: str
+    what: str
+    value: str
 
 
 @dataclass(frozen=True, slots=True)
@@ -46,6 +56,7 @@ class StateView(Result):
     valuation: str
     fixings: tuple[Fixed, ...]
     past: tuple[PastLine, ...]
+    stated: tuple[StatedLine, ...]
     paid: tuple[Payment, ...]
     owed: tuple[Owed, ...]
     to_deliver: tuple[str, ...]
@@ -71,5 +82,6 @@ class CalendarView(Result):
     """What comes next of several contracts, in order of time: `mcx readback --calendar`. `calendar_versions` are the
     lists of holidays that the dates depend on, with the version of their package."""
 
+    MAIN: ClassVar[str] = "lines"
     lines: tuple[CalendarLine, ...]
     calendar_versions: tuple[str, ...]

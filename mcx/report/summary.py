@@ -10,8 +10,9 @@ from mcx.estimators.bracket import Refinement
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.price import Valuation
 from mcx.estimators.ready import Ready
-from mcx.report.cautions import assumptions, cautions, limits, warnings
+from mcx.report.cautions import assumptions, cautions, limits, vol_warnings, warnings
 from mcx.report.given_path import day_of
+from mcx.report.model_results import model_bracket_result
 from mcx.report.plausible import implausible
 from mcx.report.results import (
     Amount,
@@ -26,7 +27,7 @@ from mcx.report.results import (
     Stage,
     Width,
 )
-from mcx.report.state import accrued, owed, standing
+from mcx.report.state import accrued, doubted, owed, standing
 
 NO_REDUCTION = "none"
 
@@ -52,6 +53,7 @@ def price_result(ready: Ready, market: Market, valuation: Valuation) -> PriceRes
         standard_error=price.standard_error,
         interval95=price.interval95,
         bracket=_bracket(valuation),
+        model_bracket=model_bracket_result(valuation.model, ready, ready.market, price.value),
         value=price.value * contract.size,
         value_standard_error=price.standard_error * contract.size,
         paths=price.paths,
@@ -74,9 +76,10 @@ def price_result(ready: Ready, market: Market, valuation: Valuation) -> PriceRes
         clean=price.value - accrued(dated, ready.unrolled.state),
         ended=str(ready.unrolled.state.ended or ""),
         checks=Checks(martingale, tuple(Stage(e.paths, e.value, e.standard_error) for e in valuation.stages)),
-        warnings=(*warnings(valuation, ready.unrolled.tape, martingale, met), *implausible(dated, ready.market)),
+        warnings=(*warnings(valuation, ready.unrolled.tape, martingale, met), *implausible(dated, ready.market),
+                  *doubted(dated, ready.unrolled.state, ready.market), *vol_warnings(market, ready.market)),
         assumptions=tuple(dict.fromkeys((*standing(ready), *assumptions(dated, market, ready.market)))),
-        limits=tuple(limits(dated)),
+        limits=tuple(limits(dated, valuation.model is not None)),
         cautions=tuple(cautions(dated, bool(conditions or ends))),
         calendar_version=dated.calendar_version,
     )

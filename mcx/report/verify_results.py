@@ -9,6 +9,7 @@ the sampling alone.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import ClassVar
 
 from mcx.report.results import Amount, Planned, Result
 
@@ -56,8 +57,9 @@ class Gap(Result):
 
 @dataclass(frozen=True, slots=True)
 class BandLine(Result):
-    """'sampling error' (half of the 95 % interval), 'half the bid-offer', 'input band' (90 %, root of squares) or
-    'tolerance'. `half_width` and `holds` are None where nothing was stated."""
+    """'sampling error' (half of the 95 % interval), 'half the bid-offer', 'input band' (90 %, root of squares),
+    'tolerance' or, where the market has vols by strike, 'model bracket' (its `half_width` is how far it reaches towards
+    the quote). `half_width` and `holds` are None where nothing was stated."""
 
     name: str
     half_width: float | None
@@ -216,7 +218,8 @@ class VerifyResult(Result):
     """Whether a dealer's quote can be right: `mcx verify`.
 
     `price` is our price at our spots, `compared` that at the spots of the quote; `mid`, `bid` and `ask` are the quote
-    on our footing. `explained`: some band holds the gap. `leads` say what closes it: readings, and
+    on our footing. `model_bracket` (a `ModelBracketResult`, about `compared`) is None but where the market has vols by
+    strike. `explained`: some band holds the gap. `leads` say what closes it: readings, and
     single inputs inside their stated uncertainty. `solve` and `target` repeat the request.
     """
 
@@ -238,6 +241,7 @@ class VerifyResult(Result):
     compared_standard_error: float
     gap: Gap
     bands: tuple[BandLine, ...]
+    model_bracket: Result | None
     verdict: str
     leads: tuple[str, ...]
     explained: bool
@@ -285,6 +289,7 @@ class Ranked(Result):
 class VerifyTable(Result):
     """Several quotes, in the order of the files, and ranked for each contract."""
 
+    MAIN: ClassVar[str] = "ranking"
     quotes: tuple[VerifyResult, ...]
     ranking: tuple[Ranked, ...]
 

@@ -8,15 +8,19 @@ from collections.abc import Iterator, Sequence
 from mcx.checked.contract import Contract
 from mcx.checked.dealer_quote import DealerQuote
 from mcx.checked.market import Market
+from mcx.estimators.footing import reference_shifts
 from mcx.estimators.levers import SHARES, Lever, without_lever
 from mcx.estimators.ready import Ready
 from mcx.estimators.readings import ReadingNotValued
 from mcx.estimators.roots import Solution
 from mcx.estimators.term import Solved
-from mcx.estimators.verify import BID_OFFER, INPUTS, SAMPLING, TOLERANCE, Band, Implied, Joint, Verification
-from mcx.report.cautions import assumptions, cautions, limits
+from mcx.estimators.verify import BID_OFFER, INPUTS, MODEL, SAMPLING, TOLERANCE, Band, Implied, Joint, Verification
+from mcx.leaves.jacobian import moved
+from mcx.leaves.market_map import MarketMap
+from mcx.report.cautions import assumptions, cautions, limits, vol_warnings
+from mcx.report.model_results import ModelBracketResult, model_bracket_result
 from mcx.report.results import Amount, Planned
-from mcx.report.state import standing
+from mcx.report.state import doubted, standing
 from mcx.report.summary import NO_REDUCTION
 from mcx.report.verify_results import (
     NO_EFFECT,
@@ -42,7 +46,7 @@ from mcx.report.verify_results import (
 
 LARGE_Z = 4.0
 HELD_BY = {SAMPLING: "the sampling error", BID_OFFER: "half the bid-offer", INPUTS: "the 90 % input band",
-           TOLERANCE: "the stated tolerance"}
+           TOLERANCE: "the stated tolerance", MODEL: "the model bracket"}
 
 
 def verify_result(ready: Ready, market: Market, found: Verification, solve: str, target: float | None) -> VerifyResult:
@@ -72,8 +76,9 @@ def verify_result(ready: Ready, market: Market, found: Verification, solve: str,
         compared_standard_error=compared.standard_error,
         gap=Gap(gap.value, gap.standard_error, z if math.isfinite(z) else None, gap.value * contract.size),
         bands=tuple(BandLine(band.name, band.half_width, band.holds) for band in found.bands),
+        model_bracket=_model(found, ready, market),
         verdict=verdict(found.bands, gap.value, contract.currency if not percent else ""),
-        leads=tuple(_leads(found)),
+        leads=tuple(_leads(found, contract.currency if not percent else "")),
         explained=any(band.holds for band in found.bands),
         inputs=tuple(InputEffect(each.lever.name, each.lever.subject, min(filter(None, each.lever.widths)),
                                  each.change.value, each.change.standard_error, each.note) for each in found.effects),
@@ -93,10 +98,11 @@ def verify_result(ready: Ready, market: Market, found: Verification, solve: str,
         target=target,
         planned=Planned(plan.asked, plan.paths, plan.pilot_paths, plan.target,
                         None if plan.target is None else price.half_width <= plan.target),
-        warnings=tuple(_warnings(found, market, contract)),
+        warnings=(*_warnings(found, market, contract), *doubted(dated, ready.unrolled.state, ready.market),
+                  *vol_warnings(market, ready.market)),
         assumptions=tuple(dict.fromkeys(
             (*standing(ready), *assumptions(dated, market, ready.market), *CONVENTIONS))),
-        limits=tuple(limits(dated)),
+        limits=tuple(limits(dated, found.model is not None)),
         cautions=tuple(cautions(dated, named=False)),
         calendar_version=dated.calendar_version,
     )
@@ -110,7 +116,7 @@ CONVENTIONS = (
 
 def verdict(bands: Sequence[Band], gap: float, currency: str) -> str:
     """One sentence: which bands hold the gap, which do not, or that none does."""
-    size = f"{gap:+,.6g} {currency} per unit" if currency else f"{1e4 * gap:+,.1f} bp"
+    size = _size(gap, currency)
     inside = [HELD_BY[band.name] for band in bands if band.holds]
     outside = [HELD_BY[band.name] for band in bands if band.holds is False]
     if not inside:
@@ -119,8 +125,29 @@ def verdict(bands: Sequence[Band], gap: float, currency: str) -> str:
     return f"The gap of {size} is inside {_joined(inside, 'and')}{tail}."
 
 
-def _leads(found: Verification) -> Iterator[str]:
-    """What closes the gap by itself."""
+def _size(gap: float, currency: str) -> str:
+    return f"{gap:+,.6g} {currency} per unit" if currency else f"{1e4 * gap:+,.1f} bp"
+
+
+def _model(found: Verification, ready: Ready, market: Market) -> ModelBracketResult | None:
+    """The model bracket about our price at the spots of the quote."""
+    if found.model is None:
+        return None
+    there = moved(market, reference_shifts(found.quote, market, ready.dated.contract))
+    return model_bracket_result(found.model, ready, MarketMap.of(there, ready.dated), found.compared.value)
+
+
+def _leads(found: Verification, currency: str) -> Iterator[str]:
+    """What closes the gap by itself; `currency` '' where prices are in percent."""
+    if [band.name for band in found.bands if band.holds] == [MODEL]:
+        may = ("so far the vols of its own levels take a price with one vol" if found.model.exact else
+               "a dealer who prices the skew may be there")
+        yield f"Explained by the model bracket alone: {may}; one vol for each tenor cannot say whether that is right."
+    if found.model is not None and found.model.exact:
+        left = sorted(found.gap.value - change for change in found.model.strip)
+        nearest = min(left, key=abs)
+        yield (f"With each strike at its own vol the contract needs no model of levels; of the gap that leaves "
+               f"{_size(nearest, currency)}.")
     if found.closing:
         yield f"Read otherwise it would be closed: {_joined(found.closing, 'or')}."
     elif found.readings.readings:

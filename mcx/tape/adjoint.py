@@ -22,6 +22,7 @@ from mcx.tape.ops import OPS, Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Instruction, Leaf, LeafKind, Sum, Tape
 from mcx.tape.registers import uniform_values
+from mcx.tape.rules import Value
 
 Wanted: TypeAlias = Callable[[Leaf], bool]
 Gradient: TypeAlias = dict[int, list[Product]]  # by value that is the same on every path: products that add up
@@ -218,3 +219,32 @@ def leaf_sums(
                 bars[operand] = bars.get(operand, 0.0) + (part.left if part.right is None else part.left * part.right)
     return found
 
+
+
+def by_normals(tape: Tape, values: Sequence[Value], result: int) -> np.ndarray:
+    """The derivative of one value by every normal, (normals,), on one path; `values` those of the tape there, as
+    `interpret` gives them, each a number."""
+    moves = moving(tape)
+    bars: dict[int, Value] = {result: np.float64(1.0)}
+    found, numbers = np.zeros(tape.normals), Numbers()
+    for number in range(result, -1, -1):
+        if number not in bars or not moves[number]:
+            continue
+        step, bar = tape.instructions[number], bars.pop(number)
+        if step.op is Op.NORMAL:
+            found[step.payload] += bar
+            continue
+        at = At(numbers, tuple(values[k] for k in step.operands), values[number], bar, risky=True)
+        for operand, rule in zip(step.operands, rules_of(step.op, len(step.operands)), strict=True):
+            if rule and moves[operand]:
+                part = rule(at)
+                bars[operand] = bars.get(operand, 0.0) + (part.left if part.right is None else part.left * part.right)
+    return found
+
+
+def moving(tape: Tape) -> list[bool]:
+    """For each value whether a normal moves it."""
+    found: list[bool] = []
+    for step in tape.instructions:
+        found.append(step.op is Op.NORMAL or any(found[k] for k in step.operands))
+    return found

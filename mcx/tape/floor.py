@@ -138,27 +138,28 @@ def certain(dated: DatedContract, nodes: Sequence[float]) -> Certain:
         flag = walk.ends[day]
         ends, case = case.given({flag: YES}, max(flag, _last(payments))), case.given({flag: NO})
         stages.append(Stage(day, None if case is None else _choices(payments, case),
-                            None if ends is None else _choices(payments, ends)))
+                            None if ends is None else _choices(payments, ends, flag)))
         if case is None:
             break
     return Certain(tuple(stages))
 
 
-def _choices(payments: Iterable[Payment], case: Case) -> tuple[Choice, ...]:
-    """The outcomes of each event of a day."""
+def _choices(payments: Iterable[Payment], case: Case, decided: int = 0) -> tuple[Choice, ...]:
+    """The outcomes of each event of a day; `decided` is a value of the tape that the case knows and that says more of
+    them: whether any of several hits of one span came."""
     events = groupby(payments, key=lambda payment: payment.event)
-    found = (tuple(_outcomes(list(owed), case)) for _, owed in events)
+    found = (tuple(_outcomes(list(owed), case, decided)) for _, owed in events)
     return tuple(choice for choice in found if any(choice))
 
 
-def _outcomes(payments: list[Payment], case: Case) -> Iterator[Outcome]:
+def _outcomes(payments: list[Payment], case: Case, decided: int) -> Iterator[Outcome]:
     """What an event may owe: the payments of one of its sides, or nothing."""
-    flags = dict.fromkeys(payment.flag for payment in payments)
+    flags, until = dict.fromkeys(payment.flag for payment in payments), max(_last(payments), decided)
     for flag in flags:
-        there = case.given({flag: YES}, _last(payments))
+        there = case.given({flag: YES}, until)
         if there is not None:
             yield tuple(Owed(payment, there[payment.amount]) for payment in payments if payment.flag == flag)
-    if case.given(dict.fromkeys(flags, NO), _last(payments)) is not None:
+    if case.given(dict.fromkeys(flags, NO), until) is not None:
         yield ()
 
 

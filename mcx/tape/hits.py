@@ -18,17 +18,19 @@ from mcx.dates.dated_contract import DatedContract, DatedHit, Day
 from mcx.faults import Fault
 from mcx.tape.builder import Builder
 from mcx.tape.formulas import Formulas, Scene, Unreadable, Values
-from mcx.tape.linear import ALWAYS, Linear
 from mcx.tape.observations import Observations
 from mcx.tape.ops import Op
 from mcx.tape.program import Leaf, LeafKind, LevelKey
 from mcx.tape.running import Watched
-from mcx.tape.thresholds import Thresholds
+from mcx.tape.thresholds import thresholds_of
 
 YEAR = 365.0  # days, as times are counted
 ROUNDING = 1e-6  # days
 ONE_LEVEL = ("the moment of a hit is known for one level of one asset; '{}' waits for several: give each a running "
              "value and an event of its own")
+FIRST_EXIT = ("'{}' waits for the first exit from between two levels, and the law of its moment is not worked out; pay "
+              "on a date whether it came, which is exact ('- {{at: expiry, if: {}, then: [{{pay: 1}}]}}'), or watch it "
+              "on dates")
 WHICH_FIRST = ("it ends the contract, and so may a hit of '{}' be first in the same stretch of time: which of the two "
                "comes first is not known; watch one of them on dates")
 
@@ -211,7 +213,9 @@ class Hits:
         found = self._levels.of(flag)
         running = stretch.hit.watch.running
         if len({(barrier.key.asset, barrier.op, level) for barrier, level in found}) != 1:
-            raise Unreadable(stretch.hit.event.at.place, ONE_LEVEL.format(running.name))
+            assets, sides = {barrier.key.asset for barrier, _ in found}, {barrier.op for barrier, _ in found}
+            text = FIRST_EXIT if len(assets) == 1 < len(sides) else ONE_LEVEL
+            raise Unreadable(stretch.hit.event.at.place, text.format(*[running.name] * 2))
         barrier, level = next(iter(found))
         return barrier.key.asset, level
 
@@ -221,7 +225,7 @@ class _Levels:
 
     def __init__(self, formulas: Formulas):
         self.builder: Builder = formulas.builder
-        self._thresholds = Thresholds(self.builder.instructions, _Fixed(formulas), self.builder, _Same())
+        self._thresholds = thresholds_of(formulas)
 
     def of(self, flag: int) -> set[tuple]:
         noted = self._thresholds.extremes
@@ -234,23 +238,6 @@ class _Levels:
         if step.op in (Op.NOT, Op.OR, Op.AND):
             return {pair for operand in step.operands for pair in self.of(operand)}
         return set()
-
-
-@dataclass(frozen=True)
-class _Fixed:
-    """The numbers of the contract behind values, looked up as they are asked for."""
-
-    formulas: Formulas
-
-    def __getitem__(self, value: int) -> float | None:
-        return self.formulas.fixed(value)
-
-
-class _Same:
-    """Every value as it is."""
-
-    def __getitem__(self, value: int) -> Linear:
-        return {ALWAYS: value}
 
 
 def _no_running(name: Name) -> Values:

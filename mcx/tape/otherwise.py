@@ -6,7 +6,7 @@ the tape once; a reading that says what the contract says comes out as the same 
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass, replace
 
 from mcx.dates.dated_contract import DatedContract
@@ -67,9 +67,14 @@ def unroll_otherwise(
             outputs.append(Output.of("reading", value, other.reading.name))
             outputs.append(Output.of("difference", builder.emit(Op.SUB, value, price.value), other.reading.name))
     together = drop_dead_code(builder.tape(outputs))
-    weighted = weigh(together, fixed_values(together, dated.contract), everything_drawn, makeup.leaders).tape
+
+    def weighed(outputs: Sequence[Output]) -> Tape:
+        tape = drop_dead_code(replace(together, outputs=tuple(outputs)))
+        return weigh(tape, fixed_values(tape, dated.contract), everything_drawn, makeup.leaders).tape
+
+    weighted = weighed(together.outputs)
     wanted = [output for output in weighted.outputs if output.kind != "gap"]
-    if unsure := _without_law(weighted, wanted, found):
+    if unsure := _without_law(weighted, wanted, found, lambda k: weighed([together.outputs[0], together.outputs[k]])):
         kept = [other for other in others if other.reading not in {fault.reading for fault in unsure}]
         left = unroll_otherwise(dated, kept, nodes=nodes, makeup=makeup, pieces=pieces,
                                 everything_drawn=everything_drawn)
@@ -85,16 +90,21 @@ def unroll_otherwise(
 
 
 def _without_law(
-    tape: Tape, outputs: Sequence[Output], found: Sequence[DatedOtherwise]
+    tape: Tape, outputs: Sequence[Output], found: Sequence[DatedOtherwise], beside: Callable[[int], Tape]
 ) -> tuple[DatedOtherwise, ...]:
     """The readings that have no law beside the others, though they have one alone: what enters by its chances alone may
-    have to be drawn beside what others draw. All of them where the contract's own law is lost."""
+    have to be drawn beside what others draw. Where the contract's own law is lost, those beside which alone it is
+    (`beside` gives the tape of the contract and one other output), or all."""
 
-    def faults(output: Output) -> tuple[Fault, ...]:
+    def faults(tape: Tape, output: Output) -> tuple[Fault, ...]:
         return tuple(conflicts(drop_dead_code(replace(tape, outputs=(output,)))))
 
-    lost = faults(outputs[0])
-    wrong = [(other, lost or faults(output)) for other, output in zip(found, outputs[1::2], strict=True)]
+    if lost := faults(tape, outputs[0]):
+        pairs = [beside(number) for number in range(1, len(outputs), 2)]
+        wrong = [(other, faults(pair, pair.outputs[0])) for other, pair in zip(found, pairs, strict=True)]
+        wrong = wrong if any(each for _, each in wrong) else [(other, lost) for other in found]
+    else:
+        wrong = [(other, faults(tape, output)) for other, output in zip(found, outputs[1::2], strict=True)]
     return tuple(DatedOtherwise(other.reading, None, each) for other, each in wrong if each)
 
 

@@ -116,6 +116,9 @@ def lower(tape: Tape, leaf_values: Sequence[float] | np.ndarray) -> Program:
     )
 
 
+READS_LEVELS = frozenset({Op.MOMENT, Op.UNHIT})  # besides their operands
+
+
 def uniform_values(
     tape: Tape, leaf_values: Sequence[float] | np.ndarray, flags: Sequence[float | None] = ()
 ) -> list[float | None]:
@@ -130,7 +133,7 @@ def uniform_values(
             known.append(step.payload)
         elif step.op is Op.LEAF:
             known.append(float(leaves[step.payload]))
-        elif step.operands and all(known[k] is not None for k in step.operands):
+        elif step.operands and step.op not in READS_LEVELS and all(known[k] is not None for k in step.operands):
             known.append(float(evaluate(step.op, *(known[k] for k in step.operands))))
         elif _is_choice(step, known):
             known.append(known[_choice(step, known)])
@@ -155,9 +158,11 @@ def _chosen(tape: Tape, uniform: Sequence[float | None]) -> Tape:
     for number, step in enumerate(tape.instructions):
         if uniform[number] is None and _is_choice(step, uniform):
             same[number] = same[_choice(step, uniform)]
+    if same == list(range(len(same))):
+        return tape
     return replace(
         tape, instructions=tuple(replace(step, operands=tuple(same[k] for k in step.operands))
-                                 for step in tape.instructions) if same != list(range(len(same))) else tape.instructions,
+                                 for step in tape.instructions),
         outputs=tuple(output.at(same[output.value]) for output in tape.outputs),
         sums=tuple(replace(each, left=same[each.left], right=None if each.right is None else same[each.right])
                    for each in tape.sums))

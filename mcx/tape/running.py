@@ -148,11 +148,6 @@ class Watched:
         fixed = self._by_fixings(day)
         if running.how in ("ever", "always"):
             turned = float(running.how == "ever")
-            for date, known in sorted(stated.items()):
-                seen = self._by_fixings(Day(-1.0, date)) if known.value != turned else None
-                if seen == turned:
-                    text = f"'{running.name}' is stated as {bool(known.value)} on {date}, which fixings contradict"
-                    raise Unreadable(known.place, text.replace("True", "true").replace("False", "false"))
             by_then = [known.value for date, known in sorted(stated.items()) if date <= day.date]
             if fixed == turned or turned in by_then:
                 return turned
@@ -163,9 +158,6 @@ class Watched:
             if found:
                 beyond = fixed is not None and (fixed < found[-1].value if running.how == "lowest" else
                                                 fixed > found[-1].value)
-                if beyond and found[-1] is stated.get(day.date):
-                    raise Unreadable(found[-1].place, f"'{running.name}' is stated as {found[-1].value:.12g} on "
-                                                      f"{day.date}; fixings reach {fixed:.12g}")
                 return fixed if beyond else found[-1].value
         what = "false" if running.how == "ever" else "true" if running.how == "always" else "4150.5"
         at = running.at

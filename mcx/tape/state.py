@@ -6,6 +6,7 @@ from dataclasses import dataclass, field
 
 from mcx.checked.payoff import Deliver, Event, Pay
 from mcx.dates.dated_contract import Day, Occasion
+from mcx.tape.stated import Claim
 
 
 @dataclass(frozen=True, slots=True)
@@ -59,7 +60,8 @@ class State:
     """The state of a contract on the valuation date. `running` holds values that are known, one or one for each
     asset, `terms` level terms that were observed, `fixings` the levels that were read, by day and asset, as they count;
     `ended` the day on which it ended, None where it has not; `uncounted` deliveries of which it is not fixed how many
-    shares they are, so that whole ones cannot be told from fractions."""
+    shares they are, so that whole ones cannot be told from fractions; `denied` what is stated not to have been reached
+    by the end of the valuation date."""
 
     events: list[PastEvent] = field(default_factory=list)
     payments: list[FixedAmount] = field(default_factory=list)
@@ -70,6 +72,7 @@ class State:
     terms: dict[str, tuple[float, ...]] = field(default_factory=dict)
     fixings: dict[tuple[Day, int], float] = field(default_factory=dict)
     uncounted: dict[Deliver, None] = field(default_factory=dict)
+    denied: list[Claim] = field(default_factory=list)
 
     @property
     def seasoned(self) -> bool:

@@ -12,6 +12,7 @@ from dataclasses import dataclass
 
 from mcx.faults import Place
 from mcx.tape.builder import Builder
+from mcx.tape.formulas import Formulas
 from mcx.tape.linear import ALWAYS, Linear, opposite, plain, product
 from mcx.tape.ops import Op
 from mcx.tape.program import Barrier, Instruction
@@ -65,6 +66,12 @@ class Thresholds:
             found = self._below(right, self._level(left), not strict, step.place)
             return None if found is None else opposite(self.builder, found)
         return None
+
+    def below(self, value: int, number: float) -> tuple[tuple[Barrier, int], ...]:
+        """The barriers, each at its level, that decide whether a value is below a number; () where none do."""
+        found = self._below(value, Level(number, self.builder.constant(number)), True, None) or {}
+        events = [event for event in found if event]
+        return tuple(events[0]) if len(events) == 1 else ()
 
     def _level(self, value: int) -> Level:
         return Level(self.fixed[value], plain(self.builder, self.values[value]))
@@ -123,3 +130,29 @@ class Thresholds:
 
     def _made(self, op: Op, a: Level, b: Level) -> Level:
         return Level(float(evaluate(op, a.number, b.number)), self.builder.emit(op, a.value, b.value))
+
+
+def thresholds_of(formulas: Formulas) -> Thresholds:
+    """What reads the comparisons of a tape under construction, having noted what there is of it; into the same tape."""
+    builder = formulas.builder
+    found = Thresholds(builder.instructions, _Fixed(formulas), builder, _Same())
+    for step in tuple(builder.instructions):
+        found.note(step)
+    return found
+
+
+@dataclass(frozen=True)
+class _Fixed:
+    """The numbers of the contract behind values, looked up as they are asked for."""
+
+    formulas: Formulas
+
+    def __getitem__(self, value: int) -> float | None:
+        return self.formulas.fixed(value)
+
+
+class _Same:
+    """Every value as it is."""
+
+    def __getitem__(self, value: int) -> Linear:
+        return {ALWAYS: value}

@@ -25,6 +25,7 @@ from mcx.tape.ops import Op
 from mcx.tape.program import Leaf, LeafKind
 from mcx.tape.running import FOLDS, Observed, Watched
 from mcx.tape.shares import Shares
+from mcx.tape.stated import against_fixings, contradictions, denied_today
 from mcx.tape.state import Accruing, FixedAmount, PastEvent, State
 
 AT_A_HIT = ("shares cannot be delivered at the moment of a hit that is watched continuously: their level on the "
@@ -75,6 +76,9 @@ class Walk:
     def run(self) -> None:
         """Walk every moment, until the contract has ended on every path."""
         self.faults += which_first(self.dated)
+        watched = [state for state in self.observed.values() if isinstance(state, Watched)]
+        self.faults += (*contradictions(watched), *(fault for state in watched for fault in against_fixings(state)))
+        self.state.denied += denied_today(watched)
         for moment in self.dated.moments:
             self._hit_until(moment.day.time)
             if self.builder.number(self.alive) == 0.0:

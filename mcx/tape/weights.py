@@ -30,7 +30,7 @@ class Weighted:
 
     bracketed   barriers of several assets that one payment depends on at a time
     drawn       barriers and extremes that are still drawn
-    joined      barriers of several assets that move as one: what one payment depends on at a time is the law of one asset
+    joined      barriers of several assets that move as one, so that they have the law of one asset
     """
 
     tape: Tape

@@ -173,7 +173,8 @@ SLIPS = [
     ("{3m: 17%, 1y: 18%, 3y: 19%}", "{}",
      "8:60: expected a number, or numbers by tenor or date, found a mapping; the curve is empty"),
     ("{3m: 17%, 1y: 18%, 3y: 19%}", "{1y: {90%: 20%, 100%: 18%}}",
-     "8:61: a vol by strike is a key of a later version and is refused rather than ignored"),
+     "8:65: expected a vol, found a mapping; vols by strike go under '{strikes: {80%: {1y: 21%}, 100%: {1y: 18%}}, "
+     "priced_at: 100%}'"),
     ("{value: 80 bp, uncertain: 25 bp, source: bond desk, as_of: 2026-12-01 16:00}",
      "{discount_factors: {1y: 0.9}}",
      "6:17: discount factors stand for rates only"),

@@ -149,6 +149,29 @@ def test_broken_shapes_are_wrong(kind: str):
     assert both > 30
 
 
+BY_STRIKE = """market: 2026-12-01
+rates: {EUR: 2%}
+assets: {harbour: {spot: 100, currency: EUR, yield: 0%, vol: {strikes: {80%: 25%, 100%: 20%}, priced_at: spot}}}
+"""
+
+
+def test_broken_vols_by_strike_are_wrong():
+    """Schema and loader agree about them too: also where strikes are levels, and where one is no strike."""
+    both = 0
+    for text in (BY_STRIKE, BY_STRIKE.replace("80%:", "80:").replace("100%:", "110.5:"),
+                 BY_STRIKE.replace("80%:", "low:"), BY_STRIKE.replace("80%:", "-80%:"),
+                 BY_STRIKE.replace("80%:", "80 bp:"), BY_STRIKE.replace("priced_at: spot", "priced_at: 90%"),
+                 BY_STRIKE.replace("priced_at: spot", "priced_at: forward")):
+        (document,) = parse_documents(text.encode(), "test.yaml")[0]
+        for where, what, body in [("whole", "as it is", document.body), *broken(document.body)]:
+            if where == "whole" or ".vol" in where:
+                marked = not validator().is_valid(seen(body))
+                faults = [fault.text for fault in checked_request([replace(document, body=body)])[1]]
+                assert marked == bool(faults), f"{where}: {what}: {faults}"
+                both += marked
+    assert both > 30
+
+
 SLIPS = {  # one slip of an analyst's each, in one line of a contract or market
     "coupon: 3.9%": ("coupon: 3.9", "is not valid"),
     "knock_in: 65%": ("knock_in: -65%", "is not valid"),

@@ -169,3 +169,56 @@ def test_what_has_no_bound_is_infinite():
     assert note(unbounded).least(lambda time: 1.0).value == pytest.approx(-100 + 0.04)
     owing = NOTE.replace("pay: 1.2", "pay: -worst(spot)")
     assert note(owing).least(lambda time: 1.0).value == -math.inf
+
+
+HIT = """payoff: hit_or_end
+terms:
+  watched: {type: watch}
+  expiry:  {type: date}
+running:
+  touched: {ever: any(spot <= 80), at: watched}
+events:
+  - at: {once: touched}
+    if: true
+    then: [{pay: AT_HIT}, end]
+  - at: expiry
+    pay: AT_END
+---
+contract: hit or end
+currency: EUR
+SIZED
+payoff: hit_or_end
+terms: TERMS
+---
+market: TODAY
+rates: {EUR: RATES}
+assets: {harbour: {spot: 100, currency: EUR, yield: 0%, vol: 40%}}
+"""
+TEXTBOOK = {"SIZED": "units: 1\nassets: [harbour]", "TERMS": "{watched: {continuous: [0y, 1y]}, expiry: 1y}",
+            "TODAY": "0y"}
+DATED = {"SIZED": "units: 1\nassets: [harbour]\nstart: 2026-12-01\nsettlement: 0 business days\n"
+                  "calendar: {holidays: none, roll: following}",
+         "TERMS": "{watched: {continuous: [2026-12-01, 2027-12-01]}, expiry: 2027-12-01}", "TODAY": "2026-12-01"}
+
+
+@pytest.mark.parametrize("how", [TEXTBOOK, DATED], ids=["textbook", "dated"])
+@pytest.mark.parametrize(("rates", "at_hit", "at_end", "least", "most"), [
+    ("-10%", 1, 1, 1.0, math.exp(0.1)),     # sooner is less: a hit at once
+    ("10%", 1, 1, math.exp(-0.1), 1.0),
+    ("-10%", -1, 0, -math.exp(0.1), 0.0),   # owed by the holder: later is more
+    ("{6m: 5%, 1y: -1%}", 1, 2, math.exp(-0.025), 2 * math.exp(0.01)),   # least between the ends, at the node
+    ("{6m: -5%, 1y: 1%}", 1, 0.5, 0.5 * math.exp(-0.01), math.exp(0.025)),
+])
+def test_the_floor_of_a_hit_under_negative_rates(how: dict, rates: str, at_hit: float, at_end: float, least: float,
+                                                 most: float):
+    """An amount paid at the hit is worth least and most where the discount factor is: under negative rates at the first
+    moment, and at a node of the curve where it turns there; no path leaves these bounds."""
+    text = HIT.replace("AT_HIT", str(at_hit)).replace("AT_END", str(at_end)).replace("RATES", rates)
+    for old, new in how.items():
+        text = text.replace(old, new)
+    ready = prepare(text)
+    found = bounds(ready)
+    assert found == pytest.approx((least, most), rel=2e-3 if how is DATED else 1e-12)  # 6m is no day of its own
+    hold(prepare(text, everything_drawn=True), 2**14)
+    prices = prepare(text, everything_drawn=True).by_path(2**14, SEED)["price"]
+    assert prices.min() - found[0] < 0.03 and found[1] - prices.max() < 0.03

@@ -14,9 +14,7 @@ from mcx.estimators.reduction.points import BRIDGE, COMPONENTS
 from mcx.estimators.reduction.scheme import Case, Draft, Inapplicable, Method, Scheme, Stage
 from mcx.estimators.reduction.stratified import STRATIFIED
 from mcx.faults import Refusal, RequestError
-from mcx.tape.ops import Op
 from mcx.tape.program import Tape
-from mcx.tape.unroll import Unrolled
 
 METHODS: tuple[Method, ...] = (CONTROLS, HEDGE, IMPORTANCE, ANTITHETIC, STRATIFIED, BRIDGE, COMPONENTS)
 BY_NAME = {method.name: method for method in METHODS}
@@ -57,26 +55,26 @@ def _fitted(case: Case, names: tuple[str, ...]) -> Scheme:
     if not names:
         return Scheme((), case.ready.program)
     unrolled = case.ready.unrolled
-    if why := _without_tape(unrolled, names):
-        raise Refusal(f"'{case.title}': no '{why}', since it does not read amounts paid at the moment of a hit, nor assets that "
-                      f"are watched together all the time")
     draft = Draft(unrolled.observed)
     for stage in (Stage.LEVELS, Stage.NORMALS):
         for name in names:
             if BY_NAME[name].stage is stage:
                 draft = _changed(BY_NAME[name], case, draft)
         if stage is Stage.LEVELS:
-            draft = replace(draft, tape=case.ready.expanded(draft.tape) if draft.controls else unrolled.tape)
+            draft = replace(draft, tape=_expanded(case, draft) if draft.controls else unrolled.tape)
     try:
         return fitted(case, names, draft)
     except Inapplicable as reason:
         raise Refusal(f"'{case.title}': no '{','.join(names)}', since {reason}") from None
 
 
-def _without_tape(unrolled: Unrolled, names: tuple[str, ...]) -> str:
-    """The first method that reads the contract's tape where that holds what the method does not know."""
-    unknown = unrolled.bracketed or any(step.op is Op.MOMENT for step in unrolled.observed.instructions)
-    return next((name for name in names if unknown and BY_NAME[name].reads_tape), "")
+def _expanded(case: Case, draft: Draft) -> Tape:
+    """The draft's tape as one that reads normals, its controls last: the distances between bounds come before them."""
+    tape, own = case.ready.expanded(draft.tape), len(case.ready.unrolled.observed.outputs)
+    controls = slice(own, own + len(draft.controls))
+    outputs = (*tape.outputs[:own], *tape.outputs[controls.stop :], *tape.outputs[controls])
+    assert len(outputs) == len(case.ready.unrolled.tape.outputs) + len(draft.controls), "a control lies between bounds"
+    return replace(tape, outputs=outputs)
 
 
 def _changed(method: Method, case: Case, draft: Draft) -> Draft:

@@ -9,6 +9,7 @@ import math
 import time
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from statistics import median
 
 import numpy as np
 
@@ -23,6 +24,7 @@ from mcx.machine.run import Stream
 
 COMPARED = (*CHOICES, ("antithetic", "sobol-bridge"), ("hedge",), ("controls", "hedge"))
 SHORTER = (64, 16, 4)  # shares of the run that the error is also noted at
+REPEATED, PAIRS = 3, 5  # runs of those, of which the shortest counts; pairs of runs that costs are compared by
 EXACT = 1e-12  # of the price: an error below is rounding
 
 
@@ -37,13 +39,14 @@ class Point:
 
 @dataclass(frozen=True, slots=True)
 class Compared:
-    """One choice: its estimate, the time it took, its variance for a path with that variance's own relative error, and
-    shorter runs of it, the whole one last."""
+    """One choice: its estimate, the time it took, its variance for a path with that variance's own relative error, the
+    processor time for a path over that of plain sampling, and shorter runs of it, the whole one last."""
 
     scheme: Scheme
     price: Estimate
     seconds: float
     doubt: float
+    cost: float
     points: tuple[Point, ...]
 
     @property
@@ -59,28 +62,45 @@ class Compared:
 def compare(case: Case, seconds: float | None, paths: int | None) -> tuple[list[Compared], list[tuple[str, str]]]:
     """Every choice that applies, plain sampling first, and the names of the others with the reason."""
     found, refused, fitted = [], [], {}
-    Sampler(scheme_of(case, ()), case.seed, case.threads, case.notice).sample(FIRST_PILOT)  # compiles, starts threads
+    plain = Sampler(scheme_of(case, ()), case.seed, case.threads, case.notice)
+    plain.sample(FIRST_PILOT)  # compiles, starts threads
     for names in COMPARED:
         try:
             scheme = scheme_of(case, names, fitted)
         except Refusal as reason:
             refused.append((",".join(names), str(reason).partition(", since ")[2]))
             continue
-        found.append(_run(case, scheme, seconds, paths))
+        found.append(_run(case, scheme, plain, seconds, paths))
     return found, refused
 
 
-def _run(case: Case, scheme: Scheme, seconds: float | None, paths: int | None) -> Compared:
+def _run(case: Case, scheme: Scheme, plain: Sampler, seconds: float | None, paths: int | None) -> Compared:
     sampler = Sampler(scheme, case.seed, case.threads, case.notice)
     if paths is None:
         paths = sampler.within_time(_paths_for(sampler, seconds))
     sizes = sorted({sampler.paths(max(paths // share, FIRST_PILOT // 4)) for share in SHORTER} | {sampler.paths(paths)})
     points = []
     for size in (size for size in sizes if size <= sampler.paths(paths)):
-        begun = time.perf_counter()
-        (price,) = sampler.sample(size, first_output_only=True).results
-        points.append(Point(size, time.perf_counter() - begun, price.standard_error))
-    return Compared(scheme, price, points[-1].seconds, _doubt(sampler.independent(FIRST_PILOT)), tuple(points))
+        taken = []
+        for _ in range(1 if size == sampler.paths(paths) else REPEATED):
+            begun = time.perf_counter()
+            (price,) = sampler.sample(size, first_output_only=True).results
+            taken.append(time.perf_counter() - begun)
+        points.append(Point(size, min(taken), price.standard_error))
+    cost = _cost(sampler, plain, max(paths // SHORTER[1], FIRST_PILOT)) if scheme.names else 1.0
+    return Compared(scheme, price, points[-1].seconds, _doubt(sampler.independent(FIRST_PILOT)), cost, tuple(points))
+
+
+def _cost(sampler: Sampler, plain: Sampler, paths: int) -> float:
+    """A path's processor time over that of a plain path: the median over pairs of runs, one after the other, so that what
+    else the machine does meets both."""
+
+    def each(one: Sampler) -> float:
+        begun = time.process_time()
+        (price,) = one.sample(paths, first_output_only=True).results
+        return (time.process_time() - begun) / price.paths
+
+    return median(each(sampler) / each(plain) for _ in range(PAIRS))
 
 
 def _paths_for(sampler: Sampler, seconds: float) -> int:

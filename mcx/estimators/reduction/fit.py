@@ -7,6 +7,7 @@ of others have no say, and the coefficients stay small. The same controls serve 
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -20,13 +21,14 @@ from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Tape
 
-PILOT_PATHS, LARGEST_PILOT = 1 << 14, 1 << 18
+PILOT_PATHS, LARGEST_PILOT = 1 << 13, 1 << 18
 PATHS_EACH = 40  # of the pilot for each candidate
 MOST_NAMED = 6
 MOST_CONTROLS = 48  # chosen; those that must take part come on top
 EXACT = 1e-24  # of the variance: nothing is left but rounding
 PATIENCE = 12  # controls beyond the best number so far
 INDEPENDENT = 1e-9  # of a candidate's variance must be its own
+NARROW = 1e-12  # of the widest direction's variance: a direction narrower than that has no say
 MULTIPLY_AND_SUBTRACT = 0.34  # ns a path and output: see `machine/sizes.py`
 CONTROLLED = ("price", "leg", "part")
 
@@ -69,12 +71,17 @@ def _without_controls(tape: Tape, outputs: int) -> Tape:
 
 
 def _pilot(case: Case, tape: Tape, controls: int) -> np.ndarray:
-    """Every output on each path of the pilot, enlarged until enough paths differ in price; (outputs, paths)."""
+    """Every output on each path of the pilot, enlarged until enough paths differ in price; (outputs, paths). Raises
+    Inapplicable where they do not, or that costs more than `case.most`."""
     program = case.ready.lowered(drop_dead_code(tape))
-    paths = PILOT_PATHS
+    each = cost(program) if case.most < math.inf else 0.0
+    paths, drawn = PILOT_PATHS, 0
     while paths < PATHS_EACH * controls:
         paths *= 2
     while True:
+        drawn += paths
+        if drawn * each > case.most:
+            raise Inapplicable(f"a pilot of {paths:,} paths costs too much for this run")
         values = values_by_path(program, seed=case.seed, paths=paths, stream=Stream.COEFFICIENTS, threads=case.threads)
         differ = unlike(values[0])
         if differ >= FEWEST_UNLIKE:
@@ -82,7 +89,7 @@ def _pilot(case: Case, tape: Tape, controls: int) -> np.ndarray:
         if paths >= LARGEST_PILOT:
             raise Inapplicable(f"of {paths:,} pilot paths only {differ} differ in price from the rest: too few to find "
                                f"the coefficients of controls from")
-        paths *= 4
+        paths = min(4 * paths, LARGEST_PILOT)
 
 
 @dataclass(frozen=True, slots=True)
@@ -127,7 +134,7 @@ def chosen_controls(target: np.ndarray, candidates: np.ndarray, controls: tuple[
     """
     paths = len(target)
     centred = candidates - candidates.mean(axis=0)
-    scale = centred.std(axis=0)
+    scale = np.sqrt(np.einsum("pk,pk->k", centred, centred) / paths)
     usable = np.isfinite(scale) & (scale > 1e-14)
     centred = np.where(usable, centred, 0.0) / np.where(usable, scale, 1.0)
     covariance = centred.T @ centred / paths
@@ -167,10 +174,19 @@ def chosen_controls(target: np.ndarray, candidates: np.ndarray, controls: tuple[
 
 def coefficients(targets: np.ndarray, controls: np.ndarray) -> np.ndarray:
     """What to multiply each control with for each target, (controls, targets), by least squares; directions in which
-    the controls hardly vary have no say."""
+    the controls hardly vary have no say.
+
+    By the covariances, twice: what rounding leaves of the first solution is solved for again.
+    """
     centred = controls - controls.mean(axis=0)
-    scale = centred.std(axis=0)
-    solved = np.linalg.lstsq(centred / scale, targets - targets.mean(axis=0), rcond=1e-6)[0]
+    scale = np.sqrt(np.einsum("pk,pk->k", centred, centred))
+    centred /= scale
+    sizes, directions = np.linalg.eigh(centred.T @ centred)
+    kept = sizes > NARROW * sizes[-1]
+    inverse = (directions[:, kept] / sizes[kept]) @ directions[:, kept].T
+    wanted = targets - targets.mean(axis=0)
+    solved = inverse @ (centred.T @ wanted)
+    solved += inverse @ (centred.T @ (wanted - centred @ solved))
     return solved / scale[:, None]
 
 

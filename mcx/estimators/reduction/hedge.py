@@ -104,4 +104,4 @@ def _known(market: Market, asset: int, time: float, log_forward: float, logs: in
         yield f"its side of {strike:.6g}", market.above(market.level((asset, time)), strike)
 
 
-HEDGE = Method("hedge", "gains of a delta hedge on the contract's dates", Stage.LEVELS, change, reads_tape=True)
+HEDGE = Method("hedge", "gains of a delta hedge on the contract's dates", Stage.LEVELS, change)

@@ -3,9 +3,10 @@
 Normals are shifted to the mode of log |payoff| - |z|^2 / 2, where payoff times density is largest (P. Glasserman, P.
 Heidelberger, P. Shahabuddin, "Asymptotically optimal importance sampling and stratification for pricing path-dependent
 options", Mathematical Finance 9 (1999)). The payoff is counted from its value far away, so that a bond beside an option
-does not hide it. The mode is climbed to from the best of straight paths, where something is paid: a pilot
-would see only zeros. Every output carries the weight, exp(-shift z - |shift|^2 / 2), so that a probability or a life is
-as unbiased as the price; the weight itself, whose mean is 1, is a control.
+does not hide it. The mode is climbed to, by the slopes that the adjoint of the tape gives, from the best of straight
+paths, where something is paid: a pilot would see only zeros. Every output carries the weight, exp(-shift z -
+|shift|^2 / 2), so that a probability or a life is as unbiased as the price; the weight itself, whose mean is 1, is a
+control.
 """
 
 from __future__ import annotations
@@ -17,17 +18,19 @@ import numpy as np
 
 from mcx.estimators.nets import clock
 from mcx.estimators.reduction.scheme import Case, Control, Draft, Inapplicable, Method, Stage
+from mcx.tape.adjoint import by_normals
 from mcx.tape.builder import Builder
 from mcx.tape.interpret import interpret
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
 from mcx.tape.program import Output, Tape
+from mcx.tape.rules import Value
 
 FARTHEST = 12.0  # standard deviations along a straight path
-STEPS = 481
-DIRECTIONS = 64  # of straight paths, where there are several assets
-MOST_CLIMBED = 256  # normals: beyond, the best straight path is taken
-CLIMBS = 60
+STEPS, COARSE = 481, 97  # along one; along each of several
+DIRECTIONS = 16  # of straight paths, where there are several assets, besides each alone and all together
+CLIMBS, MOVES = 25, 12
+ENOUGH = 1e-4  # of the log of payoff times density, that a climb gains at least
 SMALLEST = 0.3  # a mode nearer than this is where plain paths are anyway
 TINY = 1e-290
 
@@ -78,34 +81,58 @@ def mode(case: Case) -> np.ndarray:
     """Where payoff times density is largest, (normals,); zeros where every straight path pays the same."""
     unrolled, market = case.ready.unrolled, case.ready.market
     price = drop_dead_code(replace(unrolled.tape, outputs=unrolled.tape.outputs[:1]))
+    half = np.full((price.uniforms, 1), 0.5)
     leaves = market.values(price.leaves)
+    result = price.outputs[0].value
+
+    def values(normals: np.ndarray) -> list[Value]:
+        """Every value of the tape at each point, normals (normals, points)."""
+        return interpret(price, leaves, normals, half)
+
+    def paid(values: list[Value], points: int) -> np.ndarray:
+        return np.broadcast_to(np.asarray(values[result], dtype=float), (points,))
+
     variances = clock(market, unrolled.grid)  # (steps, assets)
-
-    def paid(normals: np.ndarray) -> np.ndarray:
-        """The price at each point, normals (normals, points)."""
-        half = np.full((price.uniforms, normals.shape[1]), 0.5)
-        found = interpret(price, leaves, normals, half)[price.outputs[0].value]
-        return np.broadcast_to(np.asarray(found, dtype=float), (normals.shape[1],))
-
     straight = np.sqrt(variances / np.maximum(variances.sum(axis=0), TINY))  # (steps, assets), of length 1 each
-    away = np.linspace(-FARTHEST, FARTHEST, STEPS)
-    directions = _directions(variances.shape[1])
-    lines = np.einsum("sa,da,k->sadk", straight, directions, away).reshape(price.normals, -1)
-    prices = paid(lines)
-    if not np.isfinite(prices).any() or np.ptp(prices[np.isfinite(prices)]) == 0.0:
+    ways = _directions(variances.shape[1])
+    away = np.linspace(-FARTHEST, FARTHEST, STEPS if len(ways) == 1 else COARSE)
+    lines = _lines(straight, ways, away, price.normals)
+    prices = paid(values(lines), lines.shape[1])
+    finite = np.isfinite(prices)
+    if not finite.any() or np.ptp(prices[finite]) == 0.0:
         return np.zeros(price.normals)
     base = _base(prices)
+    if len(ways) > 1:  # the best of the directions, in finer steps
+        way = ways[[int(np.argmax(_heights(prices, base, lines))) // len(away)]]
+        lines = _lines(straight, way, np.linspace(-FARTHEST, FARTHEST, STEPS), price.normals)
+        prices = paid(values(lines), lines.shape[1])
+    start = lines[:, int(np.argmax(_heights(prices, base, lines)))]
 
-    def height(normals: np.ndarray) -> np.ndarray:
-        gain = np.abs(paid(normals) - base)
-        found = np.log(np.maximum(np.where(np.isfinite(gain), gain, 0.0), TINY)) - 0.5 * (normals**2).sum(axis=0)
-        return found
+    def look(points: np.ndarray) -> tuple[int, float, np.ndarray]:
+        """The highest of some points, how high it is, and which way is up from there."""
+        found = values(points)
+        heights = _heights(paid(found, points.shape[1]), base, points)
+        highest = int(np.argmax(heights))
+        there = [value if np.ndim(value) == 0 else value[highest % value.shape[-1]] for value in found]
+        slope = by_normals(price, there, result) / (there[result] - base)
+        return highest, float(heights[highest]), np.where(np.isfinite(slope), slope, 0.0) - points[:, highest]
 
-    heights = height(lines)
-    start = lines[:, int(np.argmax(heights))]
-    found = _climbed(start, height) if price.normals <= MOST_CLIMBED else start
-    found = np.round(found, 8)  # nothing hangs on the order in which a library adds
+    found = np.round(_climbed(start, look), 8)  # nothing hangs on the order in which a library adds
     return np.where(np.abs(found) > 1e-4, found, 0.0)
+
+
+def _lines(straight: np.ndarray, ways: np.ndarray, away: np.ndarray, normals: int) -> np.ndarray:
+    """Straight paths (normals, directions * distances): straight (steps, assets), ways (directions, assets), away
+    (distances,), in deviations; a normal that moves no step is 0."""
+    steps = straight.size
+    lines = (straight[:, :, None] * ways.T).reshape(steps, len(ways), 1) * away
+    return np.concatenate([lines.reshape(steps, -1), np.zeros((normals - steps, lines[0].size))])
+
+
+def _heights(prices: np.ndarray, base: float, normals: np.ndarray) -> np.ndarray:
+    """The log of what is paid beyond the base, and of the density."""
+    gain = np.abs(prices - base)
+    return np.log(np.maximum(np.where(np.isfinite(gain), gain, 0.0), TINY)) - 0.5 * (normals**2).sum(axis=0)
 
 
 def _base(prices: np.ndarray) -> float:
@@ -124,22 +151,19 @@ def _directions(assets: int) -> np.ndarray:
     return whole / np.linalg.norm(whole, axis=1, keepdims=True)
 
 
-def _climbed(start: np.ndarray, height: Callable[[np.ndarray], np.ndarray]) -> np.ndarray:
-    """Uphill from a point by central differences, all points of a gradient as lanes of one pass."""
-    point, step, size = start, 1.0, 1e-4
-    best = float(height(point[:, None])[0])
-    moves = size * np.eye(len(point))
+def _climbed(start: np.ndarray, look: Callable[[np.ndarray], tuple[int, float, np.ndarray]]) -> np.ndarray:
+    """Uphill from a point along the slope, which the adjoint gives; several lengths of a move are lanes of one pass."""
+    point, step = start, 1.0
+    _, best, slope = look(point[:, None])
     for _ in range(CLIMBS):
-        both = height(np.concatenate([point[:, None] + moves, point[:, None] - moves], axis=1))
-        slope = (both[: len(point)] - both[len(point) :]) / (2.0 * size)
-        trials = step * 0.5 ** np.arange(12)
-        heights = height(point[:, None] + slope[:, None] * trials)
-        highest = int(np.argmax(heights))
-        if not heights[highest] > best + 1e-9:
+        lengths = step * 0.5 ** np.arange(MOVES)
+        points = point[:, None] + slope[:, None] * lengths
+        highest, height, ahead = look(points)
+        if not height > best + ENOUGH:
             break
-        point, best = point + trials[highest] * slope, float(heights[highest])
-        step = min(2.0 * trials[highest], 1.0)
+        point, best, slope = points[:, highest], height, ahead
+        step = min(2.0 * lengths[highest], 1.0)
     return point
 
 
-IMPORTANCE = Method("importance", "paths drawn where the contract pays, weighted", Stage.NORMALS, change, reads_tape=True)
+IMPORTANCE = Method("importance", "paths drawn where the contract pays, weighted", Stage.NORMALS, change)

@@ -8,6 +8,7 @@ the catalogue, so that they combine by themselves.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from enum import IntEnum
@@ -32,12 +33,14 @@ class Stage(IntEnum):
 
 @dataclass(frozen=True, slots=True)
 class Case:
-    """A contract, and how pilots of it are run."""
+    """A contract, and how pilots of it are run; `most`: what the pilot of a method may cost, in nanoseconds of
+    `machine/sizes.py`."""
 
     ready: Ready
     seed: int
     threads: int | None = None
     notice: Notice | None = None
+    most: float = math.inf
 
     @property
     def title(self) -> str:
@@ -81,15 +84,13 @@ class Draft:
 
 @dataclass(frozen=True, slots=True)
 class Method:
-    """A method of variance reduction. `excludes`: names of methods that it cannot go with, and why; `reads_tape`: it
-    looks for what it needs on the contract's tape."""
+    """A method of variance reduction. `excludes`: names of methods that it cannot go with, and why."""
 
     name: str
     about: str
     stage: Stage
     change: Callable[[Case, Draft], Draft]  # raises Inapplicable
     excludes: tuple[tuple[str, str], ...] = ()
-    reads_tape: bool = False
 
 
 @dataclass(frozen=True, slots=True)

@@ -6,6 +6,7 @@ from mcx.checked.curves import COMPOUNDING, MOST_DISCOUNT
 from mcx.checked.day_count_names import DAY_COUNTS
 from mcx.checked.read_market import KEYS, UNCERTAIN
 from mcx.checked.read_underlyings import GIVEN_UP, UNDERLYINGS
+from mcx.checked.strike_vols import FEWEST, SPOT
 from mcx.report.schemas.shapes import (
     CURRENCY,
     DATE,
@@ -24,7 +25,9 @@ from mcx.report.schemas.shapes import (
     text,
     words,
 )
+from mcx.text.scalars import DIGITS
 
+STRIKE = rf"{DIGITS}([eE][+-]?[0-9]{{1,5}})?"
 NODE = f"^({DATE}|{TENOR})$"
 RATE_OF_EXCHANGE = "^[A-Z]{3} per [A-Z]{3}$"
 NO_LESS = {"at_least": 0.0}
@@ -85,6 +88,13 @@ def _curve(one: Schema) -> Schema:
     return either(_quoted(one), _nodes(one))
 
 
+def _by_strike() -> Schema:
+    """A curve of vols for each strike, and the strike whose vols price a contract."""
+    priced_at = either(amount(), text(rf"^\+?{STRIKE}\s*%$"), words((SPOT,)))
+    strikes = by_name(refer("vol curve"), rf"^\+?{STRIKE}(\s*%)?$", least=FEWEST)
+    return mapping({"strikes": strikes, "priced_at": priced_at}, ("strikes", "priced_at"))
+
+
 def _asset() -> Schema:
     """Spot and vol, and exactly one way to say what the level gives up as time goes by."""
     time = text(f"^({DATE}|{TIME})$")
@@ -94,7 +104,7 @@ def _asset() -> Schema:
     asset = mapping({
         "spot": refer("level"),
         "currency": text(CURRENCY),
-        "vol": refer("vol curve"),
+        "vol": either(refer("vol curve"), _by_strike()),
         "yield": refer("zero curve"),
         "forwards": _nodes(amount()),
         "dividends": {"type": "array", "minItems": 1, "items": dividend},

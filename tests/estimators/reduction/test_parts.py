@@ -15,11 +15,12 @@ from mcx.dates.dating import date_on
 from mcx.estimators.nets import clock
 from mcx.estimators.plan import precision
 from mcx.estimators.price import value
-from mcx.estimators.ready import prepare
+from mcx.estimators.ready import Ready, prepare
+from mcx.estimators.reduction import choice
 from mcx.estimators.reduction.antithetic import paired
 from mcx.estimators.reduction.catalogue import conflict, scheme_of
 from mcx.estimators.reduction.choice import CHOICES, best
-from mcx.estimators.reduction.fit import Costs, chosen_controls, coefficients
+from mcx.estimators.reduction.fit import CONTROLLED, Costs, chosen_controls, coefficients
 from mcx.estimators.reduction.importance import mode, shifted
 from mcx.estimators.reduction.names import NAMES, wished
 from mcx.estimators.reduction.sample import Sampler
@@ -27,11 +28,19 @@ from mcx.estimators.reduction.scheme import Case, Control
 from mcx.faults import Refusal, RequestError
 from mcx.machine.draw_plan import DrawPlan
 from mcx.machine.orders import bridge, early_bridge
-from mcx.machine.run import draws
+from mcx.machine.run import draws, run
+from mcx.tape.adjoint import by_normals
 from mcx.tape.interpret import interpret
 
 SEED = 0x510E527FADE682D1
 EXAMPLES = Path(__file__).resolve().parents[3] / "payoffs" / "examples"
+
+
+def shipped(file: str, number: int) -> Ready:
+    """A contract of the examples."""
+    request = load([EXAMPLES / f"{file}.yaml"])
+    dated, _ = date_on(request.contracts[number], request.market)
+    return prepare(dated, request.market)[0]
 
 
 @pytest.mark.parametrize(("asked", "names"), [
@@ -111,6 +120,32 @@ def test_a_shift_carries_its_weight():
         np.testing.assert_allclose(found[output.value], plain[one.value] * ratio, rtol=1e-9, atol=1e-13)
 
 
+@pytest.mark.parametrize("name", ["average", "barrier", "exchange"])
+def test_slopes_by_normals_are_those_of_differences(name: str):
+    """The price's derivative by each normal at a point where something is paid."""
+    ready = made(name, CURVED)
+    tape, leaves = ready.unrolled.tape, ready.market.values(ready.unrolled.tape.leaves)
+    result = tape.outputs[0].value
+    point = np.abs(np.random.default_rng(SEED).normal(size=tape.normals)) * [1.0, -0.5][name == "exchange"]
+    point[::2] = np.abs(point[::2])
+    moved = 1e-5 * np.eye(tape.normals)
+    up, down = (interpret(tape, leaves, point[:, None] + sign * moved)[result] for sign in (1.0, -1.0))
+    found = by_normals(tape, interpret(tape, leaves, point), result)
+    assert np.abs(found).min() > 0.01
+    np.testing.assert_allclose(found, (up - down) / 2e-5, rtol=1e-5)
+
+
+def test_the_mode_is_where_the_slope_vanishes():
+    """Of a call far out of the money: log payoff and log density rise and fall alike, by the closed form's own terms."""
+    far = made("average", FLAT.replace("spot: 100", "spot: 55"))
+    found = mode(Case(far, SEED))
+    tape, leaves = far.unrolled.tape, far.market.values(far.unrolled.tape.leaves)
+    values = interpret(tape, leaves, found)
+    slope = by_normals(tape, values, tape.outputs[0].value) / values[tape.outputs[0].value]
+    assert np.linalg.norm(found) > 3.0
+    np.testing.assert_allclose(slope, found, atol=0.02 * np.linalg.norm(found))
+
+
 def test_the_mode_of_a_digital_is_its_edge():
     """Paid below 104, all the density on the near side: the mode is the mean, and importance has nothing to offer; paid
     below 40, it is the edge itself."""
@@ -133,11 +168,26 @@ def test_strata_share_out_the_end_of_a_path():
     np.testing.assert_array_equal(plain[:, 1:], strata[:, 1:])
 
 
+@pytest.mark.parametrize(("file", "number", "ratio"), [("barrier", 4, 20.0), ("worst_of_watched", 0, 3.0),
+                                                       ("worst_of_watched", 1, 1.5)])
+def test_controls_beside_a_hit_and_between_bounds(file: str, number: int, ratio: float):
+    """A rebate at the moment of a hit, and assets watched together: the controls read levels on dates only, lower the
+    variance and leave every other output as it is on the same paths, the distances between bounds among them."""
+    ready = shipped(file, number)
+    scheme = scheme_of(Case(ready, SEED), ("controls",))
+    plain, found = (run(program, seed=SEED, paths=1 << 15) for program in (ready.program, scheme.program))
+    outputs = ready.unrolled.tape.outputs
+    assert ready.unrolled.bracketed == any(output.kind == "gap" for output in outputs)
+    free = [number for number, output in enumerate(outputs) if output.kind not in CONTROLLED]
+    np.testing.assert_allclose(found.mean[free], plain.mean[free], rtol=1e-12)
+    error = np.hypot(found.standard_error, plain.standard_error)
+    assert np.all(np.abs(found.mean - plain.mean) <= 4.0 * error + 1e-12)
+    assert plain.variance[0] > ratio * found.variance[0]
+
+
 def test_only_a_contract_that_may_end_gets_the_early_bridge():
     """By the points of an autocall, and of an average."""
-    request = load([EXAMPLES / "autocall.yaml"])
-    dated, _ = date_on(request.contracts[0], request.market)
-    autocall, _ = prepare(dated, request.market)
+    autocall = shipped("autocall", 0)
     for ready, order in ((autocall, early_bridge), (made("average", FLAT), bridge)):
         plan = scheme_of(Case(ready, SEED), ("sobol-bridge",)).plan
         expected = order(clock(ready.market, ready.unrolled.grid))
@@ -156,6 +206,42 @@ def test_the_choice_beats_plain_sampling_and_is_always_the_same():
     assert chosen.results == named.results
     assert chosen.price.standard_error < 0.03 * plain.price.standard_error
     assert abs(chosen.price.value - plain.price.value) < 4 * plain.price.standard_error
+
+
+def test_a_choice_costs_no_more_than_its_share(monkeypatch: pytest.MonkeyPatch):
+    """What is tried is what can be paid: nothing, nothing that needs another tape, or everything, and the note says what
+    was left out; a longer run can pay more."""
+    ready = made("average", FLAT)
+    tried = []
+    monkeypatch.setattr(choice, "scheme_of", lambda case, names, known=None: (tried.append(names), scheme_of(
+        case, names, known))[1])
+    rewriting = {names for names in CHOICES if set(names) & {"controls", "importance"}}
+    for seconds, expected in ((1e-6, {()}), (0.2, set(CHOICES[:2])), (5.0, set(CHOICES))):
+        tried.clear()
+        monkeypatch.setattr(choice, "SECOND", seconds * 1e9)
+        scheme = best(Case(ready, SEED), precision(20_000, None, None))
+        assert expected <= set(tried) and (set(tried) <= expected or not set(tried) & rewriting)
+        assert ("would cost too much" in scheme.notes[-1]) == (expected != set(CHOICES))
+    monkeypatch.setattr(choice, "SECOND", 0.2e9)
+    tried.clear()
+    best(Case(ready, SEED), precision(1 << 26, None, None))
+    assert ("controls",) in tried
+
+
+def test_the_pilot_of_a_precision_is_worth_what_plain_sampling_would_take(monkeypatch: pytest.MonkeyPatch):
+    """A thousandth of the half-width takes a million times the paths, which pays for more trials."""
+    ready = made("average", FLAT)
+    monkeypatch.setattr(choice, "SECOND", 0.0)
+    wide, narrow = (best(Case(ready, SEED), precision(None, within, None)) for within in ("1", "0.001"))
+    assert wide.names == () and "controls" in narrow.names
+
+
+def test_a_pilot_of_controls_that_costs_too_much_is_refused():
+    """With the reason; the same one is run where it may cost that."""
+    ready = made("average", FLAT)
+    with pytest.raises(Refusal, match=r"since a pilot of 8,192 paths costs too much for this run"):
+        scheme_of(Case(ready, SEED, most=1e4), ("controls",))
+    assert scheme_of(Case(ready, SEED, most=1e9), ("controls",)).fit_paths == 8192
 
 
 @pytest.mark.parametrize("reduction", ["none", "controls", "antithetic", "sobol-bridge", "stratified"])

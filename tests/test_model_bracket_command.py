@@ -1,0 +1,171 @@
+"""The model bracket through the doors: `mcx price` and `mcx verify`, their text, their JSON, their records."""
+
+from __future__ import annotations
+
+import json
+from functools import cache
+from pathlib import Path
+
+import pytest
+from front_door import CALL, EXAMPLES, MARKET, SEED, mcx, written
+
+EXAMPLE = EXAMPLES / "vols_by_strike.yaml"
+ASKED = ("--paths", 16384, "--seed", SEED)
+NOTE, AUTOCALL = 0, 1
+VOLS = "{strikes: {80%: 28%, 100%: 22%, 120%: 19%}, priced_at: spot}"
+CLIQUET = """contract: Four returns
+currency: EUR
+units: 1
+assets: [harbour]
+payoff: forward_start
+terms: {side: call, pays: money, strike: 100%, strike_date: 6m, expiry: 1y}
+"""
+QUOTE = """---
+quote: Saltmarsh desk
+at: 0y
+side: mid
+unit: per unit
+price: %s
+accrual: dirty
+commitment: firm
+"""
+
+
+@cache
+def priced() -> list[dict]:
+    """The two contracts of the example."""
+    outcome = mcx("price", EXAMPLE, *ASKED, "--json")
+    assert outcome.code == 0
+    return outcome.json["prices"]
+
+
+def test_the_bracket_in_json():
+    """Ends about the headline price, every level with its strike and vol, the headline's strike named."""
+    note = priced()[NOTE]
+    bracket = note["model_bracket"]
+    prices = [one["price"] for one in bracket["strikes"]]
+    spread = [*prices, *(price for one in bracket["strikes"] for price in one["skewed"]), *bracket["strip"]]
+    assert (bracket["lower"], bracket["upper"]) == (min(spread), max(spread))
+    assert bracket["upper"] == note["price"]  # priced at the strike of the redemption
+    assert [one["assets"][0]["strike"] for one in bracket["strikes"]] == ["65% of the spot", "100% of the spot"]
+    assert [(each["asset"], each["strike"]) for each in bracket["headline"]] == [("quarry", "100% of the spot")]
+    assert (bracket["exact"], bracket["indicative"]) == (True, [])
+    assert bracket["strikes"][0]["difference_standard_error"] > 0.0 == bracket["strikes"][1]["difference_standard_error"]
+    assert bracket["paths"] == 16384
+
+
+def test_an_autocall_is_indicative():
+    """It may end early and looks at two assets; its knock-in stands at a strike given for one of them, and beyond the
+    strikes given for none."""
+    bracket = priced()[AUTOCALL]["model_bracket"]
+    assert not bracket["exact"]
+    assert bracket["strip"] == []
+    assert len(bracket["indicative"]) == 2
+    assert "ends early" in bracket["indicative"][0]
+    assert "several assets" in bracket["indicative"][1]
+    knock_in = bracket["strikes"][0]
+    assert [each["level"] for each in knock_in["assets"]] == [37.41, 2508.12]
+    assert knock_in["skewed"][1] - knock_in["skewed"][0] > 0.005  # two slopes of vol
+    assert [each["strike"] for each in bracket["headline"]] == ["100% of the spot", "4180.2"]
+
+
+@pytest.mark.parametrize(("contract", "said"), [
+    (CALL, ("100 (100% of the spot)", "every payment depends on one level of one date")),
+    (CLIQUET, ("of one to come", "indicative only", "that is no certainty", "live on forward vol and forward skew")),
+])
+def test_the_text(tmp_path, contract, said):
+    """The bracket is a heading of its own; the headline's strike and what the model cannot do are said."""
+    file = written(tmp_path, contract + MARKET.replace("vol: 22%", f"vol: {VOLS}"))
+    text = " ".join(mcx("price", file, *ASKED).out.split())
+    for words in ("model bracket (apart from sampling and inputs)", "the headline takes the 22.00 % of harbour at 100% "
+                  "of the spot", "one vol for each asset and tenor cannot do better", "vols are linear in strike between "
+                  "the strikes given, flat below 80% of the spot and above 120% of the spot", *said):
+        assert words in text
+
+
+def test_no_word_of_it_without_vols_by_strike(tmp_path):
+    outcome = mcx("price", written(tmp_path, CALL + MARKET), *ASKED)
+    assert "model bracket" not in outcome.out
+    assert mcx("price", written(tmp_path, CALL + MARKET), *ASKED, "--json").json["model_bracket"] is None
+
+
+def test_a_butterfly_is_warned_of(tmp_path):
+    vols = "{strikes: {80%: 20%, 100%: 60%, 120%: 20%}, priced_at: spot}"
+    found = mcx("price", written(tmp_path, CALL + MARKET.replace("vol: 22%", f"vol: {vols}")), *ASKED, "--json").json
+    assert any("fit no law of its level" in text for text in found["warnings"])
+
+
+SPREAD = """payoff: spread
+about: A put at 100 less one at 80.
+terms:
+  end: {type: date}
+events:
+  - at: end
+    pay: max(100 - spot, 0) - max(80 - spot, 0)
+---
+contract: Spread
+currency: EUR
+units: 1
+assets: [harbour]
+payoff: spread
+terms: {end: 1y}
+"""
+
+
+@pytest.mark.parametrize(("price", "holds"), [(4.81, True), (7.11, False), (3.90, False)])
+def test_the_verdict(tmp_path, price, holds):
+    """A quote inside the bracket is explained by it alone, one outside is not; on neither side of the price is the
+    bracket as wide."""
+    file = written(tmp_path, SPREAD + MARKET.replace("vol: 22%", f"vol: {VOLS}") + QUOTE % price)
+    found = mcx("verify", file, *ASKED, "--json").json
+    bracket, band = found["model_bracket"], found["bands"][-1]
+    assert band["name"] == "model bracket"
+    assert band["holds"] is holds is found["explained"]
+    assert (bracket["lower"] <= price <= bracket["upper"]) is holds
+    end = bracket["upper"] if price > found["compared"] else bracket["lower"]
+    assert band["half_width"] == pytest.approx(abs(end - found["compared"]), abs=1e-12)
+    assert ("inside the model bracket, outside the sampling error" in found["verdict"]) is holds
+    assert any("Explained by the model bracket alone" in lead for lead in found["leads"]) is holds
+    assert any("With each strike at its own vol" in lead for lead in found["leads"])
+    text = mcx("verify", file, *ASKED).out
+    assert "model bracket (apart from sampling and inputs)" in text
+
+
+def test_the_bracket_stands_at_the_spot_of_the_quote(tmp_path):
+    """A strike in percent goes along with it, so the level is another strike there."""
+    quote = QUOTE % 5.3 + "spot: 110\n"
+    file = written(tmp_path, CALL + MARKET.replace("vol: 22%", f"vol: {VOLS}") + quote)
+    found = mcx("verify", file, *ASKED, "--json").json
+    (one,) = found["model_bracket"]["strikes"]
+    assert one["assets"][0]["strike"] == "90.9091% of the spot"
+    assert one["assets"][0]["vol"] == pytest.approx(0.22 + 0.06 * (100 - 1000 / 11) / 20)
+    assert found["model_bracket"]["headline"][0]["vol"] == pytest.approx(0.22)
+
+
+def test_an_implied_vol_moves_all_strikes(tmp_path):
+    """It is found as for one vol: the whole of the curve that prices the contract moves."""
+    file = written(tmp_path, CALL + MARKET.replace("vol: 22%", f"vol: {VOLS}") + QUOTE % 10.5)
+    plain = written(tmp_path, CALL + MARKET + QUOTE % 10.5, "plain.yaml")
+    one, other = (next(each for each in mcx("verify", each, *ASKED, "--json").json["implied"] if each["input"] == "vol")
+                  for each in (file, plain))
+    assert one["value"] == other["value"] != 0.22
+
+
+@pytest.mark.parametrize("verb", ["price", "verify"])
+def test_records_reproduce(tmp_path: Path, verb: str):
+    """With the bracket in them; a record whose bracket was another would show."""
+    record = tmp_path / "record.json"
+    assert mcx(verb, EXAMPLE, *ASKED, "--record", record).code == 0
+    stored = json.loads(record.read_text())
+    assert stored["results"][0]["model_bracket"]["strikes"]
+    found = mcx("replay", record, "--json")
+    assert (found.code, found.json["identical"], found.json["largest_difference"]) == (0, True, 0.0)
+
+
+@pytest.mark.parametrize("command", [("greeks", "--grid"), ("readback",),
+                                     ("methods", "--paths", 4096)])
+def test_every_verb_takes_such_a_market(command):
+    """Sensitivities, ladders and methods are those of the headline's vols."""
+    verb, *rest = command
+    outcome = mcx(verb, EXAMPLE, *rest, *(ASKED if verb == "greeks" else ()), "--json")
+    assert (outcome.code, outcome.err) == (0, "")
