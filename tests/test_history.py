@@ -521,6 +521,16 @@ def test_a_delivery_that_is_certain(tmp_path: Path):
     assert any("owed on 2027-12-01: 2 shares of harbour for each note" in each for each in result.assumptions)
 
 
+def test_whole_numbers_of_shares_survive_rounding(tmp_path: Path):
+    """784 over 80 % of 98 are ten shares, though 1 / (80 % * 98) * 784 is a little less in floating point."""
+    assert 1 / (0.8 * 98) * 784 < 10
+    text = COUPONS.replace("notional: 500000", "notional: 784000").replace("NAME", "share_reverse_convertible")
+    text = text.replace("DENOM", "denomination: 784\n").replace("TODAY", "2027-11-26").replace(
+        "initial: 100, strike: 100%", "initial: 98, strike: 80%")
+    result = package.price(written(tmp_path, text + "fixings: {harbour: {2027-11-24: 70}}\n"), paths=64)
+    assert "owed on 2027-12-01: 10 shares of harbour for each note" in result.assumptions
+
+
 def test_a_number_of_shares_that_is_still_to_come(tmp_path: Path):
     """The result says that fractions are then delivered as well; once the initial level is fixed they are cash."""
     text = COUPONS.replace("NAME", "share_reverse_convertible").replace("DENOM", "denomination: 250\n").replace(
