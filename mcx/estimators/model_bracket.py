@@ -15,8 +15,9 @@ The lowest and the highest of them are the bracket. No lognormal model can do be
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, replace
+from typing import TypeAlias
 
 import numpy as np
 
@@ -36,6 +37,8 @@ from mcx.tape.strikes import READ, Strike, price_alone, strikes
 MOST_PATHS = 1 << 17  # differences on the same paths are known better than a price
 SLOPE = 1e-3  # share of a level over which the slope of vol in strike is taken
 SIDES = (-1.0, 1.0)
+ENDS = (min, max)
+End: TypeAlias = Callable[..., float]
 
 
 @dataclass(frozen=True, slots=True)
@@ -54,8 +57,9 @@ class AtStrike:
 @dataclass(frozen=True, slots=True)
 class ModelBracket:
     """Prices less the headline price: at each strike, and `strip`, with every payment that depends on one level at the
-    vols of its own strikes (with the slope of vol below and above each; empty where there is none). `exact`: these are
-    all payments that differ from path to path. `headline_vols`: those of the headline price, to its last observation.
+    vols of its own strikes (the lowest and the highest by the slopes of vol on both sides of each; empty where there is
+    none). `exact`: these are all payments that differ from path to path, of levels in the contract's own currency.
+    `headline_vols`: those of the headline price, to its last observation.
     """
 
     strikes: tuple[AtStrike, ...]
@@ -63,6 +67,11 @@ class ModelBracket:
     exact: bool
     headline_vols: tuple[tuple[str, float], ...]
     paths: int
+
+    @property
+    def settled(self) -> tuple[float, float] | None:
+        """Where the strip is the price, the lowest and the highest that it is less the headline price."""
+        return (self.strip[0], self.strip[-1]) if self.exact else None
 
     @property
     def changes(self) -> tuple[Estimate, ...]:
@@ -101,7 +110,8 @@ def model_bracket(ready: Ready, market: Market, sampling: Sampling) -> ModelBrac
     at = tuple(_at_strike(runs, strike, None if ready.dated.hits else jump_put(tape, known, strike, end, spots), end)
                for strike in found)
     strip, whole = pieces(tape, known, found)
-    return ModelBracket(at, _strip(market, ready, here, strip), whole and bool(strip),
+    apart = {contract.assets[piece.asset] for piece in strip} & set(contract.conversion)  # that of its rate is not said
+    return ModelBracket(at, _strip(market, ready, here, strip), whole and not apart,
                         tuple((name, here.vol_to(name, end)) for name in contract.assets), sampling.paths)
 
 
@@ -153,26 +163,25 @@ def _strip(market: Market, ready: Ready, here: MarketMap, strip: Sequence[Piece]
     if not strip:
         return ()
     contract = ready.dated.contract
-    changes = [0.0 for _ in SIDES]
+    changes = [0.0 for _ in ENDS]
     for piece in strip:
         name = contract.assets[piece.asset]
         flat, smile = (law(market, contract, here, name, piece.time, by_strike) for by_strike in (False, True))
-        for number, side in enumerate(SIDES):
-            changes[number] += worth(piece, smile, side) - worth(piece, flat, side)
+        for number, end in enumerate(ENDS):
+            changes[number] += worth(piece, smile, end) - worth(piece, flat, end)
     return tuple(changes)
 
 
-def worth(piece: Piece, under: LevelLaw, side: float) -> float:
-    """The mean of a function of a level that is straight between its breaks: a line, puts and digitals; `side` as for
-    the law's chances."""
-    return math.fsum(_terms(piece, under, side))
+def worth(piece: Piece, under: LevelLaw, end: End) -> float:
+    """The mean of a function of a level that is straight between its breaks: a line, puts and digitals. `end` (min or
+    max) takes each digital by one of the slopes of vol beside its strike: of a range the two may go apart."""
+    return math.fsum(_terms(piece, under, end))
 
 
-def _terms(piece: Piece, under: LevelLaw, side: float) -> Iterator[float]:
-    puts = [under.put(level) for level in piece.breaks]
-    chances = [under.below(level, side) for level in piece.breaks]
-    for k, (put, chance) in enumerate(zip(puts, chances, strict=True)):
-        yield (piece.below[k] - piece.above[k]) * chance
-        yield (piece.slopes[k + 1] - piece.slopes[k]) * put
+def _terms(piece: Piece, under: LevelLaw, end: End) -> Iterator[float]:
+    for k, level in enumerate(piece.breaks):
+        jump = piece.below[k] - piece.above[k]
+        yield end(jump * under.below(level, side) for side in SIDES)
+        yield (piece.slopes[k + 1] - piece.slopes[k]) * under.put(level)
     yield piece.above[-1]
     yield piece.slopes[-1] * (under.forward - piece.breaks[-1])  # the call less the put

@@ -7,7 +7,7 @@ from collections.abc import Iterator
 from mcx.report.model_view import show_model
 from mcx.report.price_scale import Scale
 from mcx.report.terminal import Page, decimals, fixed
-from mcx.report.verify_results import NO_EFFECT, NONE_THERE, ImpliedInput, SolvedTerm, VerifyResult, VerifyTable
+from mcx.report.verify_results import NO_EFFECT, NONE_THERE, Gap, ImpliedInput, SolvedTerm, VerifyResult, VerifyTable
 
 ANSWERS = {True: "yes", False: "no", None: ""}
 NO_NUMBER = {NONE_THERE: "", NO_EFFECT: "moves nothing"}
@@ -49,18 +49,21 @@ def show_verification(result: VerifyResult, page: Page) -> None:
         ("gap", f"{scale.show(gap.price, places)} {scale.unit}, standard error "
                 f"{scale.show(gap.standard_error, places)}, {fixed(gap.value, 2)} {result.currency} (quote less our "
                 f"price)"),
+        *_rest(gap, scale, places),
         ("paths", f"{result.paths:,}, the page in {result.seconds:.1f} s; seed {result.seed}"),
     ))
     page.heading("the quote on our footing")
     page.table(("step", "", "quote"), (
         (line.step, line.text, _footed(line.quote, line.standard_error, scale, result, number))
         for number, line in enumerate(result.footing)), words=2)
-    page.heading("what may hold the gap, each by itself")
+    page.heading(f"what may hold {'the gap' if gap.rest is None else 'what is left of the gap'}, each by itself")
     page.table(("", "half-width", "holds it"), (
         (band.name, "not stated" if band.half_width is None else scale.show(band.half_width, places),
          ANSWERS[band.holds]) for band in result.bands), last=1)
-    if gap.z is not None:
+    if gap.z is not None and gap.rest is None:
         page.line(f"  sampling error: the gap is z = {gap.z:+.1f} standard errors")
+    elif gap.rest is not None and gap.standard_error > 0.0:
+        page.line(f"  sampling error: what is left is z = {gap.rest / gap.standard_error:+.1f} standard errors")
     corner = result.worst_corner
     if corner is not None:
         far = "" if corner.share == 1.0 else f" (at {corner.share:.3g} of them: there is no such market further out)"
@@ -88,6 +91,12 @@ def show_verification(result: VerifyResult, page: Page) -> None:
         if texts:
             page.heading(title)
             page.items(texts)
+
+
+def _rest(gap: Gap, scale: Scale, places: int) -> Iterator[tuple[str, str]]:
+    if gap.rest is not None:
+        yield "left of it", (f"{scale.show(gap.rest, places)} {scale.unit}, with each strike at its own vol, which needs "
+                             "no model of levels")
 
 
 def _or_none(number: float | None, scale: Scale) -> str:

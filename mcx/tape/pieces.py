@@ -13,9 +13,11 @@ from mcx.tape.smooth import payments
 from mcx.tape.strikes import Strike, levels_read, values_at
 
 BESIDE = 1e-9  # relative, where a function is taken on one side of a break
-STRAIGHT = 1e-7  # relative, of a middle that lies between its ends
+STRAIGHT = 1e-7  # relative, of what lies between two ends
+BETWEEN = (0.29, 0.5)  # where it is looked at: no curve is met at its middle alone
 TINY = 1e-300
 FIRST, LAST = 1e-4, 1e2  # of the first and of the last break, where the outer stretches are taken
+WIDE = (1e-3, 1e5)  # levels between which a function without a break is looked at
 
 
 @dataclass(frozen=True, slots=True)
@@ -57,20 +59,20 @@ def pieces(tape: Tape, known: Sequence[float | None], strikes: Sequence[Strike])
 def _piece(tape: Tape, known: Sequence[float | None], asset: int, time: float, values: Sequence[int],
            breaks: Sequence[float]) -> Piece | None:
     """The sum of some payments; None where it is not straight between the breaks."""
-    if not breaks:
-        return Piece(asset, time, (), (), (), ())
     beside = [at * (1.0 + side * BESIDE) for at in breaks for side in (-1.0, 1.0)]
-    ends = np.array([breaks[0] * FIRST, *beside, breaks[-1] * LAST])
+    ends = np.array([breaks[0] * FIRST, *beside, breaks[-1] * LAST] if breaks else WIDE)
     low, high = ends[::2], ends[1::2]
-    points = np.concatenate([low, 0.5 * (low + high), high])
+    shares = np.array([[0.0], *([share] for share in BETWEEN), [1.0]])
+    points = (low + shares * (high - low)).ravel()
 
     def level(key: LevelKey) -> np.ndarray:
         return points if (key.asset, key.time) == (asset, time) else np.ones_like(points)
 
     every = values_at(tape, known, level)
-    at_low, middle, at_high = np.sum([every[value] for value in values], axis=0).reshape(3, -1)
+    found = np.sum([every[value] for value in values], axis=0).reshape(len(shares), -1)
+    at_low, at_high = found[0], found[-1]
     size = np.max(np.abs([at_low, at_high]))
-    if not np.all(np.abs(middle - 0.5 * (at_low + at_high)) <= STRAIGHT * max(size, TINY)):
+    if not np.all(np.abs(found - (at_low + shares * (at_high - at_low))) <= STRAIGHT * max(size, TINY)):
         return None
     slopes = (at_high - at_low) / (high - low)
     here = np.array(breaks)

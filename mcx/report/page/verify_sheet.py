@@ -46,12 +46,15 @@ def _ladder(result: VerifyResult, scale: Scale, places: int) -> Iterator[Picture
     price, are in the table only."""
     bands = [(band.name, scale.factor * band.half_width, ANSWERS[band.holds])
              for band in result.bands if band.half_width is not None and band.name != MODEL]
-    apart, error = scale.factor * result.gap.price, scale.factor * result.gap.standard_error
-    shown = scale.show(result.gap.price, places)
-    said = f"Gap of {shown} {scale.unit}; " + "; ".join(
+    gap, bar, words = result.gap.price, "gap", "the gap"
+    if result.gap.rest is not None:  # each strike at its own vol is the price
+        gap, bar, words = result.gap.rest, "left of the gap", "what each strike at its own vol leaves of the gap"
+    apart, error = scale.factor * gap, scale.factor * result.gap.standard_error
+    shown = scale.show(gap, places)
+    said = f"{words[0].upper()}{words[1:]}: {shown} {scale.unit}; " + "; ".join(
         f"{name} ± {half:.4g}: holds it: {holds}" for name, half, holds in bands) + "."
-    yield Picture("the gap and what may hold it, each by itself",
-                  gap_ladder("the gap and what may hold it", said, Bar("gap", apart, error, shown), bands), said)
+    yield Picture(f"{words} and what may hold it, each by itself",
+                  gap_ladder(f"{words} and what may hold it", said, Bar(bar, apart, error, shown), bands), said)
     yield Table("in numbers", ("", f"half-width, {scale.unit}", "holds it"), tuple(
         (band.name, "not stated" if band.half_width is None else scale.show(band.half_width, places),
          ANSWERS[band.holds]) for band in result.bands), tail=2)
