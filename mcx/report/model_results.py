@@ -79,6 +79,8 @@ EARLY_END = ("whether it ends early hangs on the skew at dates to come, the more
              "strike of today do not say that")
 ON_THE_WAY = "it looks at levels on the way, and vols by strike say nothing of how levels of two dates go together"
 TOGETHER = "how several assets move together under skew is not said by the vols of each"
+SEVERAL = ("where it buys one level and sells another the price may lie beyond that of every single vol, and so "
+           "outside the bracket")
 CONVERTED = ("how {names} under skew with a rate of exchange is not said by vols by strike: each strike at its own "
              "vol keeps the {kept} of the headline")
 NO_WIDTH = "every level has the vol of the headline: the bracket has no width, and that is no certainty"
@@ -133,6 +135,8 @@ def _indicative(found: ModelBracket, ready: Ready) -> Iterator[str]:
         return
     steps = ready.unrolled.observed.instructions
     read = [step for step in steps if step.op in (Op.LEVEL, Op.LOW, Op.HIGH)]
+    if len({one.levels for one in found.strikes}) > 1:
+        yield SEVERAL
     yield from _converted(ready)
     if any(output.kind == "end" for output in ready.unrolled.observed.outputs):
         yield EARLY_END

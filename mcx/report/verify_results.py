@@ -220,8 +220,8 @@ class VerifyResult(Result):
 
     `price` is our price at our spots, `compared` that at the spots of the quote; `mid`, `bid` and `ask` are the quote
     on our footing. `model_bracket` (a `ModelBracketResult`, about `compared`) is None but where the market has vols by
-    strike. `explained`: some band holds the gap, or what is left of it (`gap.rest`). `leads` say what closes it: readings,
-    and single inputs inside their stated uncertainty. `solve` and `target` repeat the request.
+    strike. `explained`: some band holds the gap, or what is left of it (`gap.rest`). `leads` say what closes it:
+    readings, and single inputs inside their stated uncertainty. `solve` and `target` repeat the request.
     """
 
     contract: str

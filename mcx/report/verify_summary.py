@@ -149,8 +149,8 @@ def _leads(found: Verification, currency: str) -> Iterator[str]:
     if found.rest is not None:
         low, high = found.model.settled
         sizes = dict.fromkeys(_size(end, currency) for end in (low, high))
-        yield (f"With each strike at its own vol the contract needs no model of levels: that adds {' to '.join(sizes)} to "
-               f"our price. What is implied or read otherwise below is by the headline's vol.")
+        yield (f"With each strike at its own vol the contract needs no model of levels: that adds {' to '.join(sizes)} "
+               f"to our price. What is implied or read otherwise below is by the headline's vol.")
     elif [band.name for band in found.bands if band.holds] == [MODEL]:
         yield ("Explained by the model bracket alone: a dealer who prices the skew may be there; one vol for each "
                "tenor cannot say whether that is right.")

@@ -95,8 +95,8 @@ def show_verification(result: VerifyResult, page: Page) -> None:
 
 def _rest(gap: Gap, scale: Scale, places: int) -> Iterator[tuple[str, str]]:
     if gap.rest is not None:
-        yield "left of it", (f"{scale.show(gap.rest, places)} {scale.unit}, with each strike at its own vol, which needs "
-                             "no model of levels")
+        yield "left of it", (f"{scale.show(gap.rest, places)} {scale.unit}, with each strike at its own vol, which "
+                             "needs no model of levels")
 
 
 def _or_none(number: float | None, scale: Scale) -> str:
