@@ -15,9 +15,8 @@ The lowest and the highest of them are the bracket. No lognormal model can do be
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
-from typing import TypeAlias
 
 import numpy as np
 
@@ -27,7 +26,7 @@ from mcx.estimators.estimate import Estimate
 from mcx.estimators.ready import Ready
 from mcx.estimators.revalue import Revaluer
 from mcx.leaves.market_map import MarketMap
-from mcx.leaves.smile import LevelLaw, at_strikes, law
+from mcx.leaves.smile import LevelLaw, at_strikes, laws
 from mcx.tape.jump_put import jump_put
 from mcx.tape.pieces import Piece, pieces
 from mcx.tape.program import Tape
@@ -38,7 +37,6 @@ MOST_PATHS = 1 << 17  # differences on the same paths are known better than a pr
 SLOPE = 1e-3  # share of a level over which the slope of vol in strike is taken
 SIDES = (-1.0, 1.0)
 ENDS = (min, max)
-End: TypeAlias = Callable[..., float]
 
 
 @dataclass(frozen=True, slots=True)
@@ -163,25 +161,22 @@ def _strip(market: Market, ready: Ready, here: MarketMap, strip: Sequence[Piece]
     if not strip:
         return ()
     contract = ready.dated.contract
+    by_vols = {asset: [laws(market, contract, here, contract.assets[asset], smile) for smile in (False, True)]
+               for asset in {piece.asset for piece in strip}}
     changes = [0.0 for _ in ENDS]
     for piece in strip:
-        name = contract.assets[piece.asset]
-        flat, smile = (law(market, contract, here, name, piece.time, by_strike) for by_strike in (False, True))
-        for number, end in enumerate(ENDS):
-            changes[number] += worth(piece, smile, end) - worth(piece, flat, end)
+        flat, smile = (worth(piece, law(piece.time)) for law in by_vols[piece.asset])
+        changes = [change + at - before for change, at, before in zip(changes, smile, flat, strict=True)]
     return tuple(changes)
 
 
-def worth(piece: Piece, under: LevelLaw, end: End) -> float:
-    """The mean of a function of a level that is straight between its breaks: a line, puts and digitals. `end` (min or
-    max) takes each digital by one of the slopes of vol beside its strike: of a range the two may go apart."""
-    return math.fsum(_terms(piece, under, end))
-
-
-def _terms(piece: Piece, under: LevelLaw, end: End) -> Iterator[float]:
+def worth(piece: Piece, under: LevelLaw) -> tuple[float, ...]:
+    """The mean of a function of a level that is straight between its breaks: a line, puts and digitals; the lowest and
+    the highest by the slopes of vol beside each strike, which go apart at the two ends of a range."""
+    terms = [piece.above[-1], piece.slopes[-1] * (under.forward - piece.breaks[-1])]  # the call less the put
+    digitals = []
     for k, level in enumerate(piece.breaks):
+        terms.append((piece.slopes[k + 1] - piece.slopes[k]) * under.put(level))
         jump = piece.below[k] - piece.above[k]
-        yield end(jump * under.below(level, side) for side in SIDES)
-        yield (piece.slopes[k + 1] - piece.slopes[k]) * under.put(level)
-    yield piece.above[-1]
-    yield piece.slopes[-1] * (under.forward - piece.breaks[-1])  # the call less the put
+        digitals.append([jump * under.below(level, side) for side in SIDES] if jump else [0.0])
+    return tuple(math.fsum((*terms, *map(end, digitals))) for end in ENDS)
