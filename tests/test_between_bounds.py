@@ -1,4 +1,4 @@
-"""Several assets watched together: where the truth lies between the bounds, and who must know how fine the steps are."""
+"""Several assets watched together: the truth lies between the bounds, and terms are solved on steps as fine."""
 
 from __future__ import annotations
 
