@@ -214,6 +214,7 @@ def test_not_touched_so_far(happened: str):
 
 @pytest.mark.parametrize(("happened", "more"), [
     ("{2027-03-04: true}", ""), ("", "fixings: {harbour: {2027-03-04: 79.5}}\n"),
+    ("", "fixings: {harbour: {2026-12-01: 79.5}}\n"),  # on the first day of the watch
     ("{2027-03-01: false, 2027-03-04: true}", "fixings: {harbour: {2027-03-04: 82}}\n")])
 def test_touched_already(happened: str, more: str):
     """By the contract's word, or by a fixing: the cash is certain."""
@@ -222,6 +223,7 @@ def test_touched_already(happened: str, more: str):
 
 
 @pytest.mark.parametrize(("happened", "more", "said"), [
+    ("", "fixings: {harbour: {2026-11-30: 79}}\n", "must say what had happened by 2027-05-31"),  # before the watch
     ("", "", "'touched' is watched all the time from 2026-12-01, which fixings cannot tell; the contract must say "
              "what had happened by 2027-05-31 or 2027-06-01, as 'happened: {touched: {2027-06-01: false}}'"),
     ("{2027-05-28: false}", "", "must say what had happened by 2027-05-31"),
@@ -287,10 +289,22 @@ def test_an_observation_may_be_moved_beyond_the_valuation_date():
 
 def test_a_disrupted_day_must_be_of_the_past_or_move_on(tmp_path: Path):
     """A level of the future is nobody's to state, and time goes one way."""
-    text = WORST_OF.replace("payoff:", "disruption: {lantern: {2027-12-01: 43.5, 2027-06-01: 2027-05-31}}\npayoff:", 1)
-    found = faults(tmp_path, text + market() + fixings(LEVELS))
-    assert any("lies after the valuation date 2027-09-15" in each for each in found)
-    assert any("moved to 2027-05-31; expected a later date" in each for each in found)
+    for later in ("2027-05-31", "2027-06-01"):
+        text = WORST_OF.replace(
+            "payoff:", f"disruption: {{lantern: {{2027-12-01: 43.5, 2027-06-01: {later}}}}}\npayoff:", 1)
+        found = faults(tmp_path, text + market() + fixings(LEVELS))
+        assert any("lies after the valuation date 2027-09-15" in each for each in found)
+        assert any(f"moved to {later}; expected a later date" in each for each in found)
+
+
+def test_a_level_stated_for_the_valuation_date_counts_on_it():
+    """As one of an earlier date would: the coupon is decided by it, not by the spot."""
+    early = {key: level for key, level in LEVELS.items() if key[1] < "2027-09"}
+    for level, paid in ((30.0, False), (47.0, True)):
+        text = WORST_OF.replace(
+            "payoff:", f"disruption: {{lantern: {{2027-09-01: {level}}}, harbour: {{2027-09-01: 95}}}}\npayoff:", 1)
+        state = prepare(text + market("2027-09-01") + fixings(early)).unrolled.state
+        assert any(each.day.date == date(2027, 9, 1) for each in state.payments) == paid
 
 
 def test_a_split_changes_nothing():
@@ -301,6 +315,11 @@ def test_a_split_changes_nothing():
     split = (WORST_OF.replace("payoff:", "adjustments: {lantern: {2027-05-03: 2}}\npayoff:", 1)
              + market().replace("spot: 47", "spot: 23.5") + fixings(halved))
     assert prepare(split).price(4096, SEED).mean == pytest.approx(prepare(plain).price(4096, SEED).mean, rel=1e-12)
+    on_the_day = {key: level / 2 if key[0] == "lantern" and key[1] > "2027-03" else level
+                  for key, level in LEVELS.items()} | {("lantern", "2027-03-01"): LEVELS["lantern", "2027-03-01"] / 2}
+    split = split.replace("2027-05-03: 2}", "2027-03-01: 2}").replace(fixings(halved), fixings(on_the_day))
+    assert prepare(split).price(4096, SEED).mean == pytest.approx(prepare(plain).price(4096, SEED).mean, rel=1e-12)
+    assert coupons(split) == pytest.approx(coupons(plain))
     announced = plain.replace("payoff:", "adjustments: {lantern: {2028-05-03: 2}}\npayoff:", 1)
     assert prepare(announced).price(4096, SEED).mean == prepare(plain).price(4096, SEED).mean
     assert any("not in force yet" in each for each in prepare(announced).dated.assumptions)
@@ -352,6 +371,14 @@ assets: {harbour: {spot: 100, currency: EUR, yield: 1%, vol: 20%}}
     check(prepare(text).price(1 << 18, SEED), truth, sharp=0.005)
 
 
+def test_a_level_is_known_on_the_day_of_its_last_fixing():
+    """What is decided at that close may read it: the coupon of 2027-03-01 at the mean of two closes, that one too."""
+    text = WORST_OF.replace("{harbour: 100, lantern: 50}", "{average: [2026-12-01, 2027-03-01]}")
+    levels = LEVELS | {("harbour", "2026-12-01"): 102.5, ("lantern", "2026-12-01"): 51.5}
+    state = prepare(text + market() + fixings(levels)).unrolled.state
+    assert state.terms["initial"] == pytest.approx((100.0, 50.0)) and state.payments[0].day.date == date(2027, 3, 1)
+
+
 def test_a_level_is_not_read_before_it_is_fixed(tmp_path: Path):
     """A coupon that needs the initial level stands before its last fixing."""
     text = WORST_OF.replace("{harbour: 100, lantern: 50}", "{average: [2027-03-01, 2028-01-03]}")
@@ -391,10 +418,11 @@ def test_clean_and_dirty(tmp_path: Path):
     assert (today.accrued, [(each.leg, each.amount) for each in today.owed]) == (0.0, [("coupon", 0.03)])
 
 
-def accrued(folder: Path, today: str, start: str, rule: str, count: str) -> float:
+def accrued(folder: Path, today: str, start: str, rule: str, count: str, roll: str = "following") -> float:
     """Interest of a rate of 12 % that has accrued in a contract from `start` with coupons by a rule."""
     text = COUPONS.replace("NAME", "reverse_convertible").replace("DENOM", "").replace("TODAY", today)
-    text = text.replace("30/360", count).replace("start: 2026-12-01", f"start: {start}")
+    text = text.replace("30/360", count).replace("start: 2026-12-01", f"start: {start}").replace(
+        "roll: following", f"roll: {roll}")
     text = text.replace("{from: 2027-03-01, until: 2027-12-01, every: 3 months}", rule)
     text = text.replace("final: 2027-11-24", "final: coupon_dates.last")
     return package.price(written(folder, text), paths=64).accrued
@@ -414,6 +442,24 @@ def test_interest_accrues_by_regular_periods(tmp_path: Path, today: str, start: 
     """Actual/Actual (ICMA), Rule 251: days over those of the regular period. The periods are those of the examples of
     ISDA (1998), EMU and Market Conventions: Recent Developments (from memory), the days counted by hand."""
     assert accrued(tmp_path, today, start, rule, "Actual/Actual (ICMA)") == pytest.approx(0.12 * part, rel=1e-14)
+
+
+def test_no_interest_before_the_first_day_of_a_period(tmp_path: Path):
+    """2003-11-01 is a Saturday and rolls back to the Friday: on that day the new period has not begun, by the rule."""
+    rule = "{from: 2003-11-01, until: 2004-11-01, every: 6 months}"
+    assert accrued(tmp_path, "2003-10-31", "2003-05-01", rule, "Actual/Actual (ICMA)", roll="preceding") == 0.0
+
+
+def test_interest_on_a_part_of_a_rule(tmp_path: Path):
+    """Coupons on all dates of a rule but its first: 101 of the 182 days from 2003-11-01, the second of them."""
+    text = COUPONS.replace("DENOM", "").replace("TODAY", "2004-02-10").replace("30/360", "Actual/Actual (ICMA)")
+    head = text[:text.index("payoff:")].replace("start: 2026-12-01", "start: 2003-05-01")
+    own = ("payoff: part\nterms: {listed: {type: dates}, paid: {type: dates}}\nevents:\n"
+           "  - {at: paid, pay: 12% * period, part: coupon}\n---\n")
+    terms = ("payoff: part\nterms: {listed: {from: 2003-05-01, until: 2004-11-01, every: 6 months}, "
+             "paid: listed.but_first}\n")
+    result = package.price(written(tmp_path, own + head + terms + text[text.index("---"):]), paths=64)
+    assert result.accrued == pytest.approx(0.12 * 0.5 * 101 / 182, rel=1e-14)
 
 
 def test_interest_of_the_last_period_keeps_the_end_of_february(tmp_path: Path):
@@ -475,13 +521,23 @@ def test_a_delivery_that_is_certain(tmp_path: Path):
     assert any("owed on 2027-12-01: 2 shares of harbour for each note" in each for each in result.assumptions)
 
 
+def test_whole_numbers_of_shares_survive_rounding(tmp_path: Path):
+    """784 over 80 % of 98 are ten shares, though 1 / (80 % * 98) * 784 is a little less in floating point."""
+    assert 1 / (0.8 * 98) * 784 < 10
+    text = COUPONS.replace("notional: 500000", "notional: 784000").replace("NAME", "share_reverse_convertible")
+    text = text.replace("DENOM", "denomination: 784\n").replace("TODAY", "2027-11-26").replace(
+        "initial: 100, strike: 100%", "initial: 98, strike: 80%")
+    result = package.price(written(tmp_path, text + "fixings: {harbour: {2027-11-24: 70}}\n"), paths=64)
+    assert "owed on 2027-12-01: 10 shares of harbour for each note" in result.assumptions
+
+
 def test_a_number_of_shares_that_is_still_to_come(tmp_path: Path):
     """The result says that fractions are then delivered as well; once the initial level is fixed they are cash."""
     text = COUPONS.replace("NAME", "share_reverse_convertible").replace("DENOM", "denomination: 250\n").replace(
         "initial: 100", "initial: {average: [2026-12-01, 2026-12-02]}")
     fixed = "fixings: {harbour: {2026-12-01: 98, 2026-12-02: 102}}\n"
-    said = ("how many shares 'shares' delivers is not fixed yet: fractions are taken to be delivered as well, not paid in "
-            "cash")
+    said = ("how many shares 'shares' delivers is not fixed yet: fractions are taken to be delivered as well, not paid "
+            "in cash")
     before = package.price(written(tmp_path, text.replace("TODAY", "2026-12-01")), paths=1 << 14)
     assert said in before.assumptions
     after = package.price(written(tmp_path, text.replace("TODAY", "2026-12-03") + fixed), paths=256)

@@ -110,6 +110,14 @@ def told(text: str) -> list[str]:
     return [fault.text for fault in unroll(dated, nodes=()).faults]
 
 
+def test_yesterdays_fixing_is_asked_for_and_todays_is_not():
+    """The day before the valuation date is of the past, the day itself not yet."""
+    text = note("number", "at the end", composite=False, stated=False)
+    assert told(text.replace("market: 2027-03-15", "market: 2027-03-02")) == [
+        f"'note' needs a fixing of '{name}' on 2027-03-01" for name in ASSETS]
+    assert told(text.replace("market: 2027-03-15", "market: 2027-03-01")) == []
+
+
 def test_what_a_watch_from_today_is_held_against_must_be_fixed():
     """A number, not the spot that stands for today's level elsewhere; one that is still to come is refused as such."""
     text = note("average", "all the time", composite=False, stated=False)

@@ -20,7 +20,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from mcx.checked.market import Market
+from mcx.checked.market import Curve, Market
 from mcx.estimators.batches import FEWEST_PATHS, Batches, Sampling
 from mcx.estimators.estimate import Estimate
 from mcx.estimators.ready import Ready
@@ -112,13 +112,21 @@ class _Runs:
         self.ready, self.market, self.revaluer, self.sampling = ready, market, revaluer, sampling
         self.names = ready.dated.contract.assets
         self.base = revaluer.price(market, sampling)[0]
+        self.known = {self._vols(market): self.base.means}
 
     def market_at(self, levels: Sequence[tuple[int, float]], scale: float = 1.0) -> Market:
         return at_strikes(self.market, self.ready.dated.contract,
                           {self.names[number]: level * scale for number, level in levels})
 
     def parts(self, market: Market) -> np.ndarray:
-        return self.revaluer.by_parts(market, self.sampling)
+        """The price by parts of the run."""
+        key = self._vols(market)
+        if key not in self.known:
+            self.known[key] = self.revaluer.by_parts(market, self.sampling)
+        return self.known[key]
+
+    def _vols(self, market: Market) -> tuple[Curve, ...]:
+        return tuple(market.assets[name].vol for name in self.names)
 
     def estimate(self, means: np.ndarray) -> Estimate:
         return Batches(self.base.paths, means).estimates()[0]

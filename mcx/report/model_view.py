@@ -12,20 +12,26 @@ HEADS = ("vols of", "vol")
 MOST_ASSETS = 4  # named in a row; more are in --json
 
 
-def model_line(found: ModelBracketResult, scale: Scale, places: int) -> str:
+def model_places(found: ModelBracketResult, scale: Scale, standard_error: float) -> int:
+    """Decimals by the larger error: that of the price or of a difference from it."""
+    return scale.places(max([standard_error, *(one.difference_standard_error for one in found.strikes)]))
+
+
+def model_line(found: ModelBracketResult, scale: Scale, standard_error: float) -> str:
     """'102.43 to 104.40 %; the headline takes the vol of 100% of the spot': one line beside a price."""
     if found.lower is None:
         return f"none: the price refers to no level; the headline takes {_headline(found)}"
+    places = model_places(found, scale, standard_error)
     low, high = scale.show(found.lower, places), scale.show(found.upper, places)
     tail = "; indicative only" if found.indicative else ""
     return (f"{low} to {high}{scale.sign} by the vols of the levels that the contract refers to{tail}; the headline "
             f"takes {_headline(found)}")
 
 
-def show_model(found: ModelBracketResult, scale: Scale, places: int, page: Page) -> None:
+def show_model(found: ModelBracketResult, scale: Scale, standard_error: float, page: Page) -> None:
     """The price at the vol of each level, what skew does at jumps, and how far the bracket may be trusted."""
     page.heading("model bracket (apart from sampling and inputs)")
-    page.table(HEADS + (scale.unit, "error"), model_rows(found, scale, places), words=1)
+    page.table(HEADS + (scale.unit, "error"), model_rows(found, scale, standard_error), words=1)
     if found.strikes:
         page.line(f"  errors are those of the difference from the headline price, on the same {found.paths:,} paths")
     if found.exact:
@@ -36,8 +42,9 @@ def show_model(found: ModelBracketResult, scale: Scale, places: int, page: Page)
         page.items(found.indicative)
 
 
-def model_rows(found: ModelBracketResult, scale: Scale, places: int) -> Iterator[tuple[str, str, str, str]]:
+def model_rows(found: ModelBracketResult, scale: Scale, standard_error: float) -> Iterator[tuple[str, str, str, str]]:
     """Every price that the bracket spans, under `HEADS`, the unit of the price and 'error'."""
+    places = model_places(found, scale, standard_error)
     for one in found.strikes:
         vols = ", ".join(f"{100.0 * each.vol:.2f} %" for each in one.assets[:MOST_ASSETS])
         yield _level(one), vols, scale.show(one.price, places), scale.show(one.difference_standard_error, places)

@@ -140,8 +140,9 @@ def _model(found: Verification, ready: Ready, market: Market) -> ModelBracketRes
 def _leads(found: Verification, currency: str) -> Iterator[str]:
     """What closes the gap by itself; `currency` '' where prices are in percent."""
     if [band.name for band in found.bands if band.holds] == [MODEL]:
-        yield ("Explained by the model bracket alone: a dealer who prices the skew may be there, and one vol for each "
-               "tenor cannot say whether that is right.")
+        may = ("so far the vols of its own levels take a price with one vol" if found.model.exact else
+               "a dealer who prices the skew may be there")
+        yield f"Explained by the model bracket alone: {may}; one vol for each tenor cannot say whether that is right."
     if found.model is not None and found.model.exact:
         left = sorted(found.gap.value - change for change in found.model.strip)
         nearest = min(left, key=abs)

@@ -61,6 +61,24 @@ def test_payments_have_a_calendar_of_their_own():
     assert found.calendar_version == f"holidays {holidays.__version__} ECB for payments"
 
 
+def test_dates_that_only_say_when_is_paid_are_good_for_payments():
+    """Labour Day 2028-05-01 closes ECB and not XNYS, where payments are made: it stays. A term that is observed too
+    rolls for that by the one calendar, and its payment by the other: Memorial Day 2028-05-29 closes XNYS only."""
+    calendar = ("calendar: {holidays: ECB, roll: following}\n"
+                "payment_calendar: {holidays: XNYS, roll: following}")
+    contract = CONTRACT.replace(CALENDAR, calendar)
+    found, faults = dated(contract=contract.replace(RULE, "[2027-03-24]"), terms="  paid: {type: date}\n",
+                          events=PAY + "    due: paid\n", more="  paid: 2028-05-01\n")
+    assert (faults, [str(*event.due.values()) for event in events_of(found)]) == ([], ["2028-05-01"])
+    found, faults = dated(contract=contract.replace(RULE, "[2028-05-01, 2028-05-29]"), terms=(
+        "  paid: {type: dates, per: observations}\n"), events=(
+        "  - at: observations\n    pay: 1\n    due: paid\n  - at: paid\n    pay: 1\n    due: same day\n"),
+        more="  paid: observations\n")
+    assert faults == []
+    due = [(str(event.occasion.day), str(*event.due.values())) for event in events_of(found)]
+    assert ("2028-05-02", "2028-05-02") in due and ("2028-05-29", "2028-05-30") in due
+
+
 def test_version_names_every_list():
     """The result's version names the lists of both calendars."""
     found, _ = with_calendar("calendar: {holidays: [ECB, XNYS], open: in all, roll: following}\n"

@@ -337,6 +337,29 @@ def test_cash_dividends_and_fixed_rates_of_exchange(more):
     assert abs(one.change.value - truth) < 4.0 * one.change.standard_error + slack
 
 
+def test_a_rate_of_exchange_of_the_day():
+    """A strike in the contract's currency is one of the asset's own over the rate of exchange of today; the vol of the
+    rate is in both prices."""
+    text = ("contract: Case\ncurrency: EUR\nunits: 1\nassets: [harbour]\nconversion: {harbour: composite}\n"
+            "payoff: european\nterms: {side: put, strike: 76.5, expiry: 1y}\n")
+    quoted = market(by_strike(SMILES["linear skew"])).replace("yield:", "currency: USD, yield:").replace(
+        "{EUR: 3.0%}", "{EUR: 3%, USD: 4%}").replace("assets:", "fx: {EUR per USD: {spot: 0.9, vol: 10%}}\nassets:")
+    quoted += "correlation: {harbour/EUR per USD: -25%}\n"
+    found = ready_of(text + quoted)
+    bracket = model_bracket(found, found.market.market, Sampling(SEED, PATHS))
+    forward = 0.9 * 100 * exp(0.03 - 0.02)
+
+    def price(vol: float) -> float:
+        both = sqrt(vol**2 + 0.1**2 - 2 * 0.25 * vol * 0.1)
+        d1 = log(forward / 76.5) / both + both / 2
+        return DISCOUNT * (76.5 * norm.cdf(both - d1) - forward * norm.cdf(-d1))
+
+    truth = price(0.25) - price(0.22)  # 76.5 is 85 at 0.9
+    assert bracket.strip == pytest.approx((truth, truth), abs=1e-9)
+    (one,) = bracket.strikes
+    assert abs(one.change.value - truth) < 4.0 * one.change.standard_error
+
+
 def test_every_strike_moves_with_a_vol():
     """A parallel shift of the vol that prices the contract takes all strikes along, so the bracket stays about it."""
     found = ready_of(loss() + market(by_strike(SMILES["linear skew"])))
