@@ -27,6 +27,8 @@ MOVES = "-5%,-4%,-3%,-2%,-1%,0,1%,2%,3%,4%,5%"  # of a ladder or grid, where non
 
 EXPONENT = re.compile(r"[+-]?[0-9]+(\.[0-9]*)?[eE][+-]?[0-9]{1,2}")
 REPORT = click.option("--report", type=click.Path(), help="Write a page of HTML to this file.")
+PICTURE = click.option("--picture", type=click.Path(), metavar="FILE",
+                       help="Draw the pictures of that page, as .png or .svg.")
 FILES = click.argument("files", nargs=-1, required=True, metavar="FILES…")
 AS_JSON = click.option("--json", "as_json", is_flag=True, help="One JSON object, full precision.")
 THREADS = click.option("--threads", type=int, help="Processors to use; changes no digit.  [all]")
@@ -109,6 +111,7 @@ def cli() -> None:
 @AS_JSON
 @click.option("--record", type=click.Path(), help="Write a valuation record to this new file.")
 @REPORT
+@PICTURE
 def price(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
     """What is it worth? Value, error, legs, probabilities and checks."""
     from mcx import api
@@ -132,6 +135,7 @@ def price(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
 @AS_JSON
 @click.option("--record", type=click.Path(), help="Write a valuation record to this new file.")
 @REPORT
+@PICTURE
 def greeks(files: tuple[str, ...], as_json: bool, ladder: bool, grid: bool, spot_moves: str | None,
            vol_moves: str | None, **wishes: object) -> None:
     """How does it move? Delta, gamma, vega, rho, theta and more, each with its error and its estimator."""
@@ -154,7 +158,8 @@ def greeks(files: tuple[str, ...], as_json: bool, ladder: bool, grid: bool, spot
 @click.option("--seed", type=int, help="Seed of the random numbers.  [1]")
 @THREADS
 @AS_JSON
-@click.option("--picture", type=click.Path(), metavar="FILE", help="Draw error against time, as .png or .svg.")
+@REPORT
+@PICTURE
 def methods(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
     """Which variance reduction pays? Every choice that applies, each for the same time."""
     from mcx import api
@@ -172,6 +177,7 @@ def methods(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
 @AS_JSON
 @click.option("--record", type=click.Path(), help="Write a valuation record to this new file.")
 @REPORT
+@PICTURE
 def verify(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
     """Can the dealer's quote be right? What would explain the gap?"""
     from mcx import api

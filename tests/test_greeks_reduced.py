@@ -24,9 +24,14 @@ from mcx.estimators.methods import methods
 from mcx.estimators.plan import Precision
 from mcx.estimators.price import value
 from mcx.estimators.reduction.antithetic import paired
+from mcx.estimators.reduction.catalogue import BY_NAME
+from mcx.estimators.reduction.scheme import Stage
 from mcx.leaves.jacobian import inputs
 from mcx.machine.run import Stream, run, run_scrambles
+from mcx.tape.builder import Builder
 from mcx.tape.interpret import interpret
+from mcx.tape.ops import Op
+from mcx.tape.program import Output, Sum
 
 SEED, PATHS = 0x9B05688C2B3E6C1F, 1 << 16
 POINTS = ("sobol-bridge", "sobol-components")
@@ -161,6 +166,24 @@ def test_a_pair_sums_a_path_and_its_mirror(name: str):
             assert interpret(single, values, z, u)[one.uniform] == interpret(pair, values, z, u)[other.uniform]
 
 
+def test_a_mirror_turns_the_scale_of_a_step_too():
+    """A score is summed up by steps on normals, whose scale may itself hang on what was drawn."""
+    builder = Builder()
+    one, other = (builder.input(Op.NORMAL, k) for k in (0, 1))
+    scale = builder.emit(Op.EXP, one)
+    value = builder.emit(Op.STEP, one, scale, other)
+    tape = builder.tape([Output.of("price", value)], normals=2, sums=[Sum(value, scale), Sum(other, one), Sum(value)])
+    pair, z = paired(tape), np.random.default_rng(SEED).normal(size=(2, 100))
+
+    def on(normals: np.ndarray) -> np.ndarray:
+        value = normals[0] + np.exp(normals[0]) * normals[1]
+        return np.array([value * np.exp(normals[0]), normals[0] * normals[1], value])
+
+    known = interpret(pair, (), z)
+    found = [np.prod([np.broadcast_to(known[k], 100) for k in part.factors], axis=0) for part in pair.sums]
+    np.testing.assert_allclose(found, 0.5 * (on(z) + on(-z)), rtol=1e-12, atol=1e-12)
+
+
 @pytest.mark.parametrize("reduction", [*EVERY, ()], ids=label)
 def test_threads_and_blocks_change_nothing(reduction: tuple[str, ...]):
     """Every sum of the derivative tape, and all that is made of them, to the last bit."""
@@ -242,6 +265,11 @@ def test_what_is_fitted_to_the_price_is_refused(tmp_path: Path, name: str):
     """With its reason, and exit code 2."""
     refused(mcx("greeks", written(tmp_path, CALL_CONTRACT + MARKET), "--reduction", name),
             f"no variance reduction '{name}' of sensitivities, since", NOT_OF_SENSITIVITIES[name])
+
+
+def test_only_what_changes_how_paths_are_drawn_is_taken():
+    """Sensitivities know of a method's plan of draws, and of pairs; of nothing else that it does to a tape."""
+    assert {name for name in SUPPORTED if BY_NAME[name].stage is not Stage.DRAWS} == {"antithetic"}
 
 
 @pytest.mark.parametrize(("asked", "said"), [

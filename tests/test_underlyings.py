@@ -16,11 +16,13 @@ from helpers import Estimate, check, document, prepare, request_of
 from scipy.integrate import quad
 from scipy.special import ndtr
 
+from mcx.checked.conversions import simulated_rates
 from mcx.checked.market import Market
 import mcx
 from mcx.dates.dating import date_contract
 from mcx.estimators.ready import prepare as ready_to_price
 from mcx.leaves.market_map import MarketMap
+from mcx.tape.program import Leaf, LeafKind
 
 PATHS, SEED = 2**22, 0x428A2F98D728AE22
 RATE = 0.04
@@ -226,6 +228,24 @@ def test_quanto_on_stated_forwards():
     check(priced(text), black(103 * exp(0.5 * 0.2 * 0.1), 100, 0.04))
 
 
+def test_only_composite_assets_have_a_rate_of_exchange_that_is_simulated():
+    """A quanto needs none, even where the market states one; the contract's two assets share theirs."""
+    asset = f"yield: 1%, vol: {ASSET_VOL}, quanto: {{fx_vol: 9%, fx_correlation: 40%, fx: EUR per USD}}"
+    asked, _ = _asked(option(asset, exchange("EUR per USD", 0.9, 40), currency="USD"))
+    assert simulated_rates({"harbour": "quanto"}, "EUR", asked) == []
+    assert simulated_rates({"harbour": "composite"}, "EUR", asked) == ["EUR per USD"]
+
+
+def test_a_composite_asset_on_forwards_needs_rates_of_its_currency(tmp_path: Path):
+    """The forward of the rate of exchange hangs on them, whatever the asset's own forwards say."""
+    text = option("forwards: {1y: 103}, vol: 20%", exchange("EUR per USD", 0.9, 40), rates="{EUR: 4%}",
+                  contract="conversion: {harbour: composite}\n", currency="USD")
+    (tmp_path / "case.yaml").write_text(text)
+    with pytest.raises(mcx.InputError) as caught:
+        mcx.price(tmp_path / "case.yaml")
+    assert "the market has no rates for 'USD', the currency of 'harbour'" in str(caught.value.faults[0])
+
+
 def exchange(name: str, spot: float, correlation: int) -> str:
     """The market's lines of a rate of exchange."""
     return f"fx: {{{name}: {{spot: {spot!r}, vol: {FX_VOL}}}}}\ncorrelation: {{harbour/{name}: {correlation}%}}\n"
@@ -328,6 +348,19 @@ def test_a_share_dividend_inside_a_watched_stretch():
     check(priced(no_touch("dividends: [{ex: 0.5y, share: 8%}], vol: 20%", 90)), exact, sharp=3e-3)
 
 
+def test_dividends_to_come_at_their_mean_over_a_step():
+    """Halfway between their value at both ends, before the ex date at the end of a step and after it at its start."""
+    made = MarketMap(*_asked(option(TWO)), 1.0)
+    steps = [(0.0, 0.2), (0.2, 0.25), (0.25, 0.4), (0.7, 0.75), (0.75, 0.8)]
+
+    def worth(time: float, late: bool) -> float:
+        return sum(cash * exp(-RATE * (ex - time)) for ex, cash in ((0.25, 2), (0.75, 3)) if ex > time - 1e-12 * late)
+
+    found = made.values([Leaf(LeafKind.MEAN_ESCROW, 0, start=start, end=end, last=1.0) for start, end in steps])
+    means = [(worth(start, False) + worth(end, True)) / 2 for start, end in steps]
+    assert list(found) == pytest.approx(means, rel=1e-14)
+
+
 def test_a_dividend_on_the_last_day_of_the_watch():
     """Both ends of the stretch belong to it, so the level after the dividend counts."""
     barrier, fall, drift = log(100 / 90), log(1 / 0.92), RATE - 0.02
@@ -335,25 +368,26 @@ def test_a_dividend_on_the_last_day_of_the_watch():
     check(priced(no_touch("dividends: [{ex: 1y, share: 8%}], vol: 20%", 90)), exact, sharp=3e-3)
 
 
-@pytest.mark.parametrize("ex", [0.5, 1.0])
-def test_a_cash_dividend_moves_the_level_that_is_watched(ex: float):
+@pytest.mark.parametrize(("ex", "cash", "barrier"), [
+    (0.5, 8.0, 90.0), (0.532, 8.0, 90.0), (1.0, 15.0, 80.0)])  # between two months as well, and on the last day
+def test_a_cash_dividend_moves_the_level_that_is_watched(ex: float, cash: float, barrier: float):
     """Against a fine grid on which the lognormal part is watched at the barrier less the dividend's value, in 250 steps
     a year with the crossing law of each (the barrier nearly straight in a step)."""
-    found = priced(no_touch(f"dividends: [{{ex: {ex}y, cash: 8}}], vol: 20%", 90))
+    found = priced(no_touch(f"dividends: [{{ex: {ex}y, cash: {cash}}}], vol: 20%", barrier))
     rng = np.random.default_rng(7)
     steps, paths = 250, 2**17
-    dt, left = 1 / steps, stripped((ex, 8))
+    dt, left = 1 / steps, stripped((ex, cash))
     x, alive = np.full(paths, log(left)), np.ones(paths)
     for k in range(steps):
         start, end = k * dt, (k + 1) * dt
-        worth = [8 * exp(-RATE * (ex - t)) if start < ex - 1e-9 else 0.0 for t in (start, end)]
-        edges = [log(90 - each) for each in worth]
+        worth = [cash * exp(-RATE * (ex - t)) if start < ex - 1e-9 else 0.0 for t in (start, end)]
+        edges = [log(barrier - each) for each in worth]
         after = x + (RATE - 0.02) * dt + 0.2 * sqrt(dt) * rng.standard_normal(paths)
         gaps = np.maximum(x - edges[0], 0.0), np.maximum(after - edges[1], 0.0)
         alive *= -np.expm1(-2 * gaps[0] * gaps[1] / (0.04 * dt))
         x = after
         if abs(end - ex) < 1e-9:
-            alive *= np.exp(x) > 90  # ex the dividend
+            alive *= np.exp(x) > barrier  # ex the dividend
     values = exp(-RATE) * alive
     error = sqrt(found.error**2 + values.var() / paths)
     assert error < 5e-3 * found.mean
@@ -367,6 +401,19 @@ def test_composite_watched_all_the_time():
                     currency="USD")
     vol = sqrt(0.25**2 + 0.12**2 + 2 * 0.4 * 0.25 * 0.12)
     check(priced(text), exp(-RATE) * untouched(log(90 / 80), None, 1.0, vol, RATE - 0.01 - vol**2 / 2), sharp=4e-3)
+
+
+def test_a_quanto_watched_all_the_time_under_a_vol_of_the_rate_that_moves():
+    """Its drift changes where the vol of the rate of exchange does, and the watch is split there: by quadrature over
+    the level at that time."""
+    asset = "yield: 1%, vol: 20%, quanto: {fx_vol: {0.25y: 6%, 1y: 36%}, fx_correlation: 80%, fx: EUR per USD}"
+    text = no_touch(asset, 92, contract="conversion: {harbour: quanto}\n", currency="USD")
+    later = sqrt((0.36**2 - 0.25 * 0.06**2) / 0.75)
+    first, second = (0.02 - 0.01 - 0.8 * 0.2 * each - 0.02 for each in (0.06, later))
+    start = log(100 / 92)
+    chance = quad(lambda x: untouched(start, x, 0.25, 0.2, first) * untouched(x, None, 0.75, 0.2, second), 0, 2,
+                  epsabs=1e-12, limit=200)[0]
+    check(priced(text), exp(-RATE) * chance, sharp=3e-3)
 
 
 def test_what_cannot_be_watched_is_refused():

@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
-from mcx.api.outputs import check_outputs, write_outputs
+from mcx.api.outputs import check_one, outputs_of, write_outputs
 from mcx.api.request import made_ready, read_request
 from mcx.api.sampling import File, Means, Notice, Progress, Sampling, check_sampling, means_of, sampling_of
 from mcx.checked.load import Request
@@ -25,6 +26,7 @@ def price(
     reduction: str = "none",
     record: File | None = None,
     report: File | None = None,
+    picture: File | None = None,
     progress: Progress | None = None,
     notice: Notice | None = None,
 ) -> PriceResult | PriceTable:
@@ -34,16 +36,19 @@ def price(
     `seconds` decides the number of paths; without any it is 2^20. `seed` None is 1. `threads` None takes all; it
     changes no digit. `reduction` lists methods of variance reduction, parted by commas ('antithetic,controls'), or is
     'none', or 'auto' for the choice of a short pilot. `record` names a file to write a valuation record to, `report`
-    one for a page of HTML. `notice` is called with a sentence when kernels must be compiled, or a run will take long.
-    Raises InputError, RequestError, Refusal.
+    one for a page of HTML, `picture` one (.png or .svg) for the pictures of that page, one below the other, of one
+    contract. `notice` is called with a sentence when kernels must be compiled, or a run will take long. Raises
+    InputError, RequestError, Refusal.
     """
     sampling = sampling_of(paths, within, seconds, seed, reduction)
     means = means_of(threads, progress, notice)
-    check_outputs(record, report)
+    wanted = outputs_of(record, report, picture)
     made, dated = read_request(files, with_market=True)
     check_sampling(sampling, made.contracts)
+    check_one(wanted, len(dated), "contract")
     table = price_all(made, dated, [sampling] * len(dated), means)
-    write_outputs("price", files, made, dated, table.prices, None if table.interrupted else record, report)
+    wanted = replace(wanted, record=None) if table.interrupted else wanted
+    write_outputs("price", files, made, dated, table.prices, wanted)
     return table.prices[0] if len(made.contracts) == 1 else table
 
 

@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
-from mcx.api.outputs import check_outputs, write_outputs
+from mcx.api.outputs import check_one, outputs_of, write_outputs
 from mcx.api.request import made_ready, read_request
 from mcx.api.sampling import (
     File,
@@ -42,6 +43,7 @@ def greeks(
     reduction: str = "none",
     record: File | None = None,
     report: File | None = None,
+    picture: File | None = None,
     progress: Progress | None = None,
     notice: Notice | None = None,
 ) -> GreeksResult | GreeksTable:
@@ -63,12 +65,14 @@ def greeks(
     check_paths(sampling.precision.paths)
     wish = wish_of(estimator, bump, assets, spot_moves, vol_moves)
     means = means_of(threads, progress, notice)
-    check_outputs(record, report)
+    wanted = outputs_of(record, report, picture)
     made, dated = read_request(files, with_market=True)
     check_sampling(sampling, made.contracts)
     _check_assets(wish, made.contracts)
+    check_one(wanted, len(dated), "contract")
     table = greeks_of_all(made, dated, [wish] * len(dated), [sampling] * len(dated), means)
-    write_outputs("greeks", files, made, dated, table.contracts, None if table.interrupted else record, report)
+    wanted = replace(wanted, record=None) if table.interrupted else wanted
+    write_outputs("greeks", files, made, dated, table.contracts, wanted)
     return table.contracts[0] if len(made.contracts) == 1 else table
 
 

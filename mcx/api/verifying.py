@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
-from mcx.api.outputs import check_outputs, write_outputs
+from mcx.api.outputs import check_one, outputs_of, write_outputs
 from mcx.api.request import made_ready, read_request
 from mcx.api.sampling import (
     File,
@@ -38,6 +38,7 @@ def verify(
     reduction: str = "none",
     record: File | None = None,
     report: File | None = None,
+    picture: File | None = None,
     progress: Progress | None = None,
     notice: Notice | None = None,
 ) -> VerifyResult | VerifyTable:
@@ -56,14 +57,15 @@ def verify(
     if target is not None and not solve:
         raise RequestError("'target' is a price to solve a term for; name the term with 'solve'")
     means = means_of(threads, progress, notice)
-    check_outputs(record, report)
+    wanted = outputs_of(record, report, picture)
     made, dated = read_request(files, with_market=True, with_quote=True)
     check_sampling(sampling, made.contracts)
     for each in made.contracts:
         check_target(target, notional=each.notional is not None, title=each.title)
     count = len(made.quotes)
+    check_one(wanted, count, "quote")
     results = verify_all(made, dated, [wish] * count, [sampling] * count, means)
-    write_outputs("verify", files, made, dated, results, record, report)
+    write_outputs("verify", files, made, dated, results, wanted)
     if count == 1:
         return results[0]
     from mcx.report.verify_summary import verify_table

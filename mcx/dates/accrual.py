@@ -21,7 +21,7 @@ def part_passed(dated: DatedContract, occasion: Occasion, since: Day) -> float:
         regular, skipped = dated.regular[occasion.schedule]
         number = skipped + occasion.nth - 1
         opens = regular.step(number - 1) if occasion.nth > 1 else contract.start.date
-        today = min(max(today, opens), regular.step(number))  # dates that roll leave days on either side
+        today = min(today, regular.step(number))  # a date that rolls leaves days after its period
     return year_fraction(contract.day_count, opens, today, regular=regular) / occasion.period
 
 

@@ -176,7 +176,7 @@ class Bench:
         solved = None
         if solve:
             wanted = foot.mid if target is None else target
-            solved = solve_term(self.ready.dated, self.market, solve, wanted, self.sampling)
+            solved = solve_term(self.ready, self.market, solve, wanted, self.sampling)
         return Verification(
             quote, foot, self.valuation, there.price, gap, bands, there.effects, there.unstated, far,
             tuple(there.implied(lever, meets) for lever in there.levers if lever.kind not in NOT_MOVED),
@@ -225,9 +225,9 @@ class Compared:
 
     @cached_property
     def readings(self) -> ReadingsValuation:
-        sampling, refinement = self.bench.sampling, self.bench.valuation.refinement
-        found = value_readings(self.bench.ready.dated, self.market, paths=sampling.paths, seed=sampling.seed,
-                               pieces=refinement.pieces if refinement else 1, threads=sampling.threads,
+        sampling, ready = self.bench.sampling, self.bench.ready
+        found = value_readings(ready.dated, self.market, paths=sampling.paths, seed=sampling.seed,
+                               pieces=ready.pieces, apart=ready.apart, threads=sampling.threads,
                                notice=sampling.notice)
         if found.interrupted:
             raise KeyboardInterrupt

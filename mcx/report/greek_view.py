@@ -9,6 +9,7 @@ from mcx.report.price_view import Scale, bounds
 from mcx.report.terminal import Page, decimals, fixed
 
 JUMP = "jump"
+JUMPS = "the payoff jumps here, or has no bounded slope: no pathwise estimate of the payments behind it"
 
 
 def show_greeks(result: GreeksResult, page: Page) -> None:
@@ -32,15 +33,12 @@ def show_greeks(result: GreeksResult, page: Page) -> None:
     page.table(("", "value", "error", "unit", "by"), (greek_row(one, one.estimator) for one in result.greeks), last=2)
     if result.refused:
         page.heading("not given")
-        said: dict[str, list[str]] = {}
-        for each in result.refused:
-            said.setdefault(each.reason, []).append(" ".join(filter(None, (each.name, each.asset, each.tenor))))
-        page.items(f"{', '.join(names)}: {reason}" for reason, names in said.items())
+        page.items(refused(result))
     if result.comparison:
         page.heading("for comparison: revaluation on the same random numbers, biased by the size of the move")
         page.table(("", "value", "error", "unit", ""), (greek_row(one, one.note) for one in result.comparison), last=2)
     if result.jumps:
-        page.heading("the payoff jumps here, or has no bounded slope: no pathwise estimate of the payments behind it")
+        page.heading(JUMPS)
         page.items(f"{jump.kind} at {jump.place or 'an unnamed place'}" for jump in result.jumps)
     if result.ladder:
         named = "spots moved together" if not result.assets else f"only the spot of {', '.join(result.assets)} moved"
@@ -58,10 +56,18 @@ def show_greeks(result: GreeksResult, page: Page) -> None:
             page.items(texts)
 
 
+def refused(result: GreeksResult) -> Iterator[str]:
+    """Sensitivities that are not given, those with one reason together."""
+    said: dict[str, list[str]] = {}
+    for each in result.refused:
+        said.setdefault(each.reason, []).append(" ".join(filter(None, (each.name, each.asset, each.tenor))))
+    yield from (f"{', '.join(names)}: {reason}" for reason, names in said.items())
+
+
 def greek_row(greek: Greek, words: str) -> tuple[str, ...]:
     """A sensitivity with its error, and what is said of it."""
     places = decimals(greek.standard_error, 2, 2)
-    said = words if greek.resolved else f"{words}; not resolved"
+    said = "; ".join(filter(None, (words, "" if greek.resolved else "not resolved")))
     name = " ".join(filter(None, (greek.name, greek.asset, greek.tenor)))
     return name, fixed(greek.value, places), fixed(greek.standard_error, places), greek.unit, said
 

@@ -7,6 +7,7 @@ with them the numbers of paths, differ from run to run.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import ClassVar
 
 from mcx.report.results import Result
 
@@ -62,6 +63,7 @@ class NotApplied(Result):
 class MethodsResult(Result):
     """Which variance reduction pays on a contract: `mcx methods`. `methods` are sorted by efficiency."""
 
+    MAIN: ClassVar[str] = "methods"
     contract: str
     payoff: str
     currency: str
@@ -83,3 +85,7 @@ class MethodsTable(Result):
     """Several contracts."""
 
     contracts: tuple[MethodsResult, ...]
+
+    def rows(self) -> list[dict]:
+        """The choices of all contracts."""
+        return [{"contract": each.contract, **row} for each in self.contracts for row in each.rows()]

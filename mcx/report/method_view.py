@@ -8,6 +8,8 @@ from mcx.estimators.reduction.names import NONE
 from mcx.report.method_results import MethodLine, MethodsResult
 from mcx.report.terminal import Page, decimals, fixed
 
+HEADS = ("methods", "std error", "z", "variance ratio", "cost", "efficiency", "to 1 bp")
+
 
 def show_methods(result: MethodsResult, page: Page) -> None:
     """The choices, the most efficient first, and what the columns mean."""
@@ -16,26 +18,47 @@ def show_methods(result: MethodsResult, page: Page) -> None:
     page.line(f"{result.contract} ({result.payoff})", style="bold")
     page.line(f"seed {result.seed}; each choice for {result.each}")
     page.heading("variance reduction, the most efficient first")
-    page.table(("methods", unit, "std error", "z", "variance ratio", "cost", "efficiency", "to 1 bp"),
-               (_row(line, factor, percent) for line in result.methods))
-    page.line("variance ratio: of plain sampling over this, at equal paths, ± its standard error; cost: processor time for a "
-              "path over that of plain sampling; efficiency: variance × time of plain sampling over this; z: distance from "
-              "all others pooled; to 1 bp: seconds until the 95 % half-width is 1 bp of the "
-              + ("notional" if percent else "price"))
+    page.table((HEADS[0], unit, *HEADS[1:]), (method_row(line, factor, percent) for line in result.methods))
+    page.line(explained(percent))
     if result.closed_form is not None:
-        page.line(f"closed form: {fixed(factor * result.closed_form, 8)} {unit}; z against it: " + ", ".join(
-            f"{line.method} {line.z_closed_form:+.2f}" for line in result.methods if line.efficiency is not None))
-    noted = [f"{line.method}: {'; '.join(note.removeprefix(f'{line.method}: ') for note in line.notes)}"
-             for line in result.methods if line.notes]
-    refused = [f"{one.method}: {one.reason}" for one in result.not_applied]
-    for title, texts in (("what they found", noted), ("not applicable", refused), ("assumptions", result.assumptions),
+        page.line(against_closed_form(result, factor, unit))
+    for title, texts in (("what they found", found(result)), ("not applicable", refused(result)),
+                         ("assumptions", result.assumptions),
                          ("not in the model", result.limits), ("read it with care", result.cautions)):
         if texts:
             page.heading(title)
             page.items(texts)
 
 
-def _row(line: MethodLine, factor: float, percent: bool) -> Iterator[str]:
+def explained(percent: bool) -> str:
+    """What the columns mean."""
+    return ("variance ratio: of plain sampling over this, at equal paths, ± its standard error; cost: processor time "
+            "for a path over that of plain sampling; efficiency: variance × time of plain sampling over this; z: distance "
+            "from all others pooled; to 1 bp: seconds until the 95 % half-width is 1 bp of the "
+            + ("notional" if percent else "price"))
+
+
+def against_closed_form(result: MethodsResult, factor: float, unit: str) -> str:
+    return f"closed form: {fixed(factor * result.closed_form, 8)} {unit}; z against it: " + ", ".join(
+        f"{line.method} {line.z_closed_form:+.2f}" for line in result.methods if line.efficiency is not None)
+
+
+def found(result: MethodsResult) -> list[str]:
+    """What the choices found on their pilots, those that found the same together."""
+    said: dict[str, list[str]] = {}
+    for line in result.methods:
+        notes = "; ".join(note.removeprefix(f"{line.method}: ") for note in line.notes)
+        if notes:
+            said.setdefault(notes, []).append(line.method.replace(",", " + "))
+    return [f"{', '.join(methods)}: {notes}" for notes, methods in said.items()]
+
+
+def refused(result: MethodsResult) -> list[str]:
+    """Choices that have nothing to offer, and why."""
+    return [f"{one.method.replace(',', ' + ')}: {one.reason}" for one in result.not_applied]
+
+
+def method_row(line: MethodLine, factor: float, percent: bool) -> Iterator[str]:
     error = factor * line.standard_error
     places = min(decimals(error, 2, 2 if percent else 4), 8)
     yield line.method.replace(",", ", ")

@@ -12,6 +12,8 @@ from mcx.report.terminal import Page, decimals, fixed
 
 COLUMNS = 4  # conditions beside one another in the table by date
 PROBABILITIES = "probabilities (risk-neutral, not a forecast)"
+HEDGED = "what a hedger is left with (standard deviation)"
+HEDGE_NOTE = "deltas regressed on what is known on each date; under the pricing measure, without costs"
 
 
 def headline(result: PriceResult) -> str:
@@ -38,9 +40,7 @@ def show_price(result: PriceResult, page: Page) -> None:
         page.table(("part", scale.unit, "standard error", result.currency), amounts(result.parts, result, scale))
     if result.owed:
         page.heading("owed already (part of the value)")
-        page.table(("paid on", "leg", "fixed on", scale.unit, result.currency, "present value"), (
-            (each.date, each.leg, each.observed, scale.show(each.amount, max(scale.fewest, 4)), fixed(each.value, 2),
-             fixed(each.present_value, 2)) for each in result.owed), words=3)
+        page.table(owed_heads(result, scale), owed_rows(result, scale), words=3)
     if result.hedge:
         _hedge(result, scale, page)
     if result.conditions or result.ends:
@@ -107,13 +107,29 @@ def amounts(amounts: Sequence[Amount], result: PriceResult, scale: Scale) -> Ite
         yield ("sum", price, error, fixed(result.value, 2))
 
 
-def _hedge(result: PriceResult, scale: Scale, page: Page) -> None:
-    page.heading("what a hedger is left with (standard deviation)")
+def owed_heads(result: PriceResult, scale: Scale) -> tuple[str, ...]:
+    return "paid on", "leg", "fixed on", scale.unit, result.currency, "present value"
+
+
+def owed_rows(result: PriceResult, scale: Scale) -> Iterator[tuple[str, ...]]:
+    """What is settled and not yet paid."""
+    for each in result.owed:
+        yield (each.date, each.leg, each.observed, scale.show(each.amount, max(scale.fewest, 4)), fixed(each.value, 2),
+               fixed(each.present_value, 2))
+
+
+def hedge_rows(result: PriceResult, scale: Scale) -> Iterator[tuple[str, ...]]:
+    """What is left of a hedge by the number of its dates."""
     places = scale.places(max(each.standard_error for each in result.hedge))
-    page.table(("traded on", scale.unit, "standard error"), (
-        (f"{each.dates} date{'' if each.dates == 1 else 's'}", scale.show(each.deviation, places),
-         scale.show(each.standard_error, places)) for each in result.hedge))
-    page.line("  deltas regressed on what is known on each date; under the pricing measure, without costs")
+    for each in result.hedge:
+        yield (f"{each.dates} date{'' if each.dates == 1 else 's'}", scale.show(each.deviation, places),
+               scale.show(each.standard_error, places))
+
+
+def _hedge(result: PriceResult, scale: Scale, page: Page) -> None:
+    page.heading(HEDGED)
+    page.table(("traded on", scale.unit, "standard error"), hedge_rows(result, scale))
+    page.line(f"  {HEDGE_NOTE}")
 
 
 def _probabilities(result: PriceResult, page: Page) -> None:

@@ -7,19 +7,26 @@ from collections.abc import Iterator, Sequence
 from pathlib import Path
 
 from mcx.report.greek_results import GreeksResult
+from mcx.report.method_results import MethodsResult
 from mcx.report.results import PriceResult
 from mcx.report.verify_results import VerifyResult
 
 
-def command(verb: str, files: Sequence[str | Path], result: PriceResult | GreeksResult | VerifyResult) -> str:
+Valued = PriceResult | GreeksResult | VerifyResult
+
+
+def command(verb: str, files: Sequence[str | Path], result: Valued | MethodsResult) -> str:
     """With the number of paths that was drawn, however it was asked for."""
-    words = ["mcx", verb, *map(str, files), "--paths", str(result.paths), "--seed", str(result.seed), "--reduction",
-             result.reduction]
-    return shlex.join([*words, *_more(result)])
+    return shlex.join(["mcx", verb, *map(str, files), *_options(result)])
 
 
-def _more(result: PriceResult | GreeksResult | VerifyResult) -> Iterator[str]:
-    """What one verb has and the others have not."""
+def _options(result: Valued | MethodsResult) -> Iterator[str]:
+    """What decides the digits; what one verb has and the others have not comes last."""
+    if isinstance(result, MethodsResult):
+        number, unit = result.each.replace(",", "").split()[:2]  # '20,000 paths' or '0.5 seconds', as asked
+        yield from (f"--{unit}", number, "--seed", str(result.seed))
+        return
+    yield from ("--paths", str(result.paths), "--seed", str(result.seed), "--reduction", result.reduction)
     if isinstance(result, GreeksResult):
         yield from _of_greeks(result)
     elif isinstance(result, VerifyResult) and result.solve:

@@ -40,8 +40,11 @@ class Result:
 
     def to_frame(self) -> DataFrame:
         """The rows as a pandas DataFrame; raises ImportError where pandas is not installed."""
-        from pandas import DataFrame
-
+        try:
+            from pandas import DataFrame
+        except ImportError:
+            raise ImportError("a frame needs the package 'pandas', which is not installed; rows() gives the same as "
+                              "plain dicts") from None
         return DataFrame(self.rows())
 
     def _repr_html_(self) -> str | None:
@@ -397,6 +400,10 @@ class ReadbackTable(Result):
     """Several contracts."""
 
     readbacks: tuple[Readback, ...]
+
+    def rows(self) -> list[dict]:
+        """The dates of all contracts."""
+        return [{"contract": each.contract, **row} for each in self.readbacks for row in each.rows()]
 
 
 @dataclass(frozen=True, slots=True)

@@ -19,7 +19,7 @@ from mcx.estimators.ready import Ready
 from mcx.report.pictures.draw import Fan, Series
 from mcx.report.settled import Settled
 from mcx.report.wording import COMPARED, Words
-from mcx.tape.formulas import figure
+from mcx.tape.formulas import figure, fixed_values
 from mcx.tape.interpret import interpret, outputs
 from mcx.tape.ops import Op
 from mcx.tape.program import LeafKind, LevelKey
@@ -36,9 +36,10 @@ MOST_FANS = 3
 class Scene:
     """The surroundings of one contract's number.
 
-    `base` names the term that levels are measured by ('' where they are not); then fans are in percent of it. `profile`
-    holds (final performance, undiscounted payments), both in percent where there is a base and a notional. `sources`
-    are files with their SHA-256.
+    `base` names the term that levels are measured by ('' where they are not); then fans are in percent of it.
+    `left_out` are assets for whose fans there is no room. `profile` holds (final performance, undiscounted payments), both in
+    percent where there is a base and a notional, `marked` the levels on its scale that the contract looks at last.
+    `sources` are files with their SHA-256.
     """
 
     terms: tuple[tuple[str, str], ...]
@@ -47,7 +48,9 @@ class Scene:
     ticks: tuple[tuple[float, str], ...]
     base: str
     fans: tuple[Fan, ...]
+    left_out: tuple[str, ...]
     profile: tuple[tuple[float, float], ...]
+    marked: tuple[tuple[str, float], ...]
     command: str
 
 
@@ -57,6 +60,7 @@ def scene(ready: Ready, documents: Sequence[Document], command: str) -> Scene:
     settled, words = Settled(dated.contract), Words(dated)
     base = _base(settled)
     texts = {document.file: document.text for document in documents}
+    fans = tuple(_fans(ready, settled, base))
     days = {moment.day.time: str(moment.day) for moment in dated.moments if moment.day.time >= 0.0}
     return Scene(
         terms=tuple((term.name, words.term(term)) for term in dated.contract.payoff.terms),
@@ -64,8 +68,10 @@ def scene(ready: Ready, documents: Sequence[Document], command: str) -> Scene:
         sources=tuple((file, hashlib.sha256(text.encode()).hexdigest()) for file, text in texts.items()),
         ticks=((0.0, "today"), *sorted(days.items())),
         base=base,
-        fans=tuple(_fans(ready, settled, base)),
+        fans=fans,
+        left_out=tuple(dated.contract.assets[MOST_FANS:]),
         profile=tuple(_profile(ready, base)),
+        marked=_marked(fans) if base else (),
         command=command,
     )
 
@@ -148,6 +154,12 @@ def _barriers(dated: DatedContract, settled: Settled, base: str, number: int, ti
             yield Series(name.replace("_", " "), tuple(points))
 
 
+def _marked(fans: Sequence[Fan]) -> tuple[tuple[str, float], ...]:
+    """Levels in percent of the base that are the same for all assets."""
+    found = [{(f"{each.name} {each.points[-1][1]:.4g}", each.points[-1][1]) for each in fan.barriers} for fan in fans]
+    return tuple(sorted(set.intersection(*found), key=lambda named: named[1])) if found else ()
+
+
 def _profile(ready: Ready, base: str) -> Iterator[tuple[float, float]]:
     """What the contract pays in all, undiscounted, if every asset moves along a straight line (in its log) from today's
     level to one final performance. Along such a line the extremes of a watched stretch stand at its ends."""
@@ -165,9 +177,16 @@ def _profile(ready: Ready, base: str) -> Iterator[tuple[float, float]]:
         ends = level(key.asset, key.start), level(key.asset, key.time)
         return {Op.LEVEL: ends[1], Op.LOW: np.minimum(*ends), Op.HIGH: np.maximum(*ends)}[op]
 
-    keys = {(step.op, step.payload) for step in tape.instructions if isinstance(step.payload, LevelKey)}
+    def moment(key: LevelKey, barrier: float) -> np.ndarray:
+        first, gone = level(key.asset, key.start), np.log(level(key.asset, key.time) / level(key.asset, key.start))
+        flat = np.abs(gone) < 1e-12  # which part has passed when the line is at the barrier
+        return np.clip(np.where(flat, 1.0, np.log(barrier / first) / np.where(flat, 1.0, gone)), 0.0, 1.0)
+
+    fixed = fixed_values(tape, dated.contract)
+    found = {(step.op, step.payload): moment(step.payload, fixed[step.operands[0]]) if step.op is Op.MOMENT
+             else read(step.op, step.payload) for step in tape.instructions if isinstance(step.payload, LevelKey)}
     leaves = [1.0 if leaf.kind is LeafKind.DISCOUNT else figure(dated.contract, leaf) for leaf in tape.leaves]
-    values = interpret(tape, leaves, levels={(op, key): read(op, key) for op, key in keys})
+    values = interpret(tape, leaves, levels=found)
     name = next(output.name for output in tape.outputs if output.kind == "price")
     paid = np.broadcast_to(outputs(tape, values)[name], WORST.shape)
     scale = 100.0 if dated.contract.notional is not None else 1.0
@@ -175,10 +194,13 @@ def _profile(ready: Ready, base: str) -> Iterator[tuple[float, float]]:
 
 
 def _lines(node: Mapping, path: str = "") -> Iterator[tuple[str, str]]:
-    """The numbers of a market as they were written, a curve on one line."""
+    """The numbers of a market as they were written: a curve on one line, and all that is said of an asset."""
     for key, value in node.entries:
         name = f"{path} {key}".strip()
-        if isinstance(value, Mapping) and not all(_is_one(inner) for _, inner in value.entries):
+        if name == "assets" and isinstance(value, Mapping):
+            yield from ((str(asset), "; ".join(f"{what} {_said(one)}".replace("_", " ") for what, one in said.entries))
+                        for asset, said in value.entries if isinstance(said, Mapping))
+        elif isinstance(value, Mapping) and not all(_is_one(inner) for _, inner in value.entries):
             yield from _lines(value, name)
         elif isinstance(value, Mapping) and "value" not in value:
             yield name, "; ".join(f"{inner} {_said(one)}" for inner, one in value.entries)
@@ -198,6 +220,7 @@ def _said(node: Node) -> str:
         case Mapping() if "value" in node:
             rest = [f"{key} {value}".replace("_", " ") for key, value in node.entries if key.text != "value"]
             return f"{node.get('value')} ({', '.join(rest)})" if rest else str(node.get("value"))
-        case Mapping():
-            return ", ".join(f"{key} {_said(value)}" for key, value in node.entries)
+        case Mapping():  # a curve within a curve, as a vol by strike, in brackets
+            return ", ".join(f"{key} ({_said(value)})" if isinstance(value, Mapping) and "value" not in value
+                             else f"{key} {_said(value)}" for key, value in node.entries)
     return "; ".join(_said(item) for item in node)

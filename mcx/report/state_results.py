@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import ClassVar
 
 from mcx.report.results import Owed, Payment, Result, Sentence
 
@@ -81,5 +82,6 @@ class CalendarView(Result):
     """What comes next of several contracts, in order of time: `mcx readback --calendar`. `calendar_versions` are the
     lists of holidays that the dates depend on, with the version of their package."""
 
+    MAIN: ClassVar[str] = "lines"
     lines: tuple[CalendarLine, ...]
     calendar_versions: tuple[str, ...]

@@ -9,6 +9,7 @@ the sampling alone.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import ClassVar
 
 from mcx.report.results import Amount, Planned, Result
 
@@ -290,6 +291,7 @@ class Ranked(Result):
 class VerifyTable(Result):
     """Several quotes, in the order of the files, and ranked for each contract."""
 
+    MAIN: ClassVar[str] = "ranking"
     quotes: tuple[VerifyResult, ...]
     ranking: tuple[Ranked, ...]
 

@@ -2,17 +2,29 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 
 from mcx.report.model_view import show_model
 from mcx.report.price_scale import Scale
 from mcx.report.terminal import Page, decimals, fixed
-from mcx.report.verify_results import NO_EFFECT, NONE_THERE, Gap, ImpliedInput, SolvedTerm, VerifyResult, VerifyTable
+from mcx.report.verify_results import (
+    NO_EFFECT,
+    NONE_THERE,
+    Gap,
+    ImpliedInput,
+    Ranked,
+    SolvedTerm,
+    VerifyResult,
+    VerifyTable,
+    WorstCorner,
+)
 
 ANSWERS = {True: "yes", False: "no", None: ""}
 NO_NUMBER = {NONE_THERE: "", NO_EFFECT: "moves nothing"}
 LONGEST_NOTE = 240
 MOST_PAYMENTS = 12  # listed one by one; more are in --json
+RANKED = ("", "dealer", "bid", "middle", "ask", "gap", "held", "implied funding")
+MONEY = "where the money is"
 IN_PERCENT = ("vol", "yield", "rates", "funding", "correlation")
 
 
@@ -22,12 +34,7 @@ def show_verifications(table: VerifyTable, page: Page) -> None:
     for contract, scale in scales.items():
         of = f" of {contract}" if len(scales) > 1 else ""
         page.heading(f"quotes{of} on one footing, the highest first, {scale.unit}")
-        page.table(("", "dealer", "bid", "middle", "ask", "gap", "held", "implied funding"), (
-            (str(each.rank), each.dealer, _or_none(each.bid, scale), scale.show(each.mid, 4),
-             _or_none(each.ask, scale), scale.show(each.gap, 4), ANSWERS[each.explained],
-             "" if each.funding is None else
-             f"{1e4 * each.funding:,.1f} ± {1e4 * each.funding_standard_error:,.1f} bp")
-            for each in table.ranking if each.contract == contract), words=2)
+        page.table(RANKED, rank_rows((each for each in table.ranking if each.contract == contract), scale), words=2)
     for each in table.quotes:
         page.line()
         show_verification(each, page)
@@ -49,12 +56,12 @@ def show_verification(result: VerifyResult, page: Page) -> None:
         ("gap", f"{scale.show(gap.price, places)} {scale.unit}, standard error "
                 f"{scale.show(gap.standard_error, places)}, {fixed(gap.value, 2)} {result.currency} (quote less our "
                 f"price)"),
-        *_rest(gap, scale, places),
+        *rest_row(gap, scale, places),
         ("paths", f"{result.paths:,}, the page in {result.seconds:.1f} s; seed {result.seed}"),
     ))
     page.heading("the quote on our footing")
     page.table(("step", "", "quote"), (
-        (line.step, line.text, _footed(line.quote, line.standard_error, scale, result, number))
+        (line.step, line.text, footed(line.quote, line.standard_error, scale, result, number))
         for number, line in enumerate(result.footing)), words=2)
     page.heading(f"what may hold {'the gap' if gap.rest is None else 'what is left of the gap'}, each by itself")
     page.table(("", "half-width", "holds it"), (
@@ -64,11 +71,8 @@ def show_verification(result: VerifyResult, page: Page) -> None:
         page.line(f"  sampling error: the gap is z = {gap.z:+.1f} standard errors")
     elif gap.rest is not None and gap.standard_error > 0.0:
         page.line(f"  sampling error: what is left is z = {gap.rest / gap.standard_error:+.1f} standard errors")
-    corner = result.worst_corner
-    if corner is not None:
-        far = "" if corner.share == 1.0 else f" (at {corner.share:.3g} of them: there is no such market further out)"
-        page.line(f"  worst corner, every input at the end of its half-width{far}: {scale.show(corner.price, places)} "
-                  f"{scale.unit}, which {'reaches' if corner.reaches else 'does not reach'} the quote; never the band")
+    if result.worst_corner is not None:
+        page.line(f"  {corner(result.worst_corner, scale, places)}")
     if result.model_bracket:
         show_model(result.model_bracket, scale, result.standard_error, page)
     if result.inputs:
@@ -85,7 +89,7 @@ def show_verification(result: VerifyResult, page: Page) -> None:
     if result.solved:
         first = result.solved[0]
         page.heading(f"the {first.term} at which the contract is worth {scale.show(first.target, places)} {scale.unit}")
-        page.items(_solved(each, scale) for each in result.solved)
+        page.items(solved(each, scale) for each in result.solved)
     for title, texts in (("warnings", result.warnings), ("assumptions", result.assumptions),
                          ("not in the model", result.limits), ("read it with care", result.cautions)):
         if texts:
@@ -93,17 +97,34 @@ def show_verification(result: VerifyResult, page: Page) -> None:
             page.items(texts)
 
 
-def _rest(gap: Gap, scale: Scale, places: int) -> Iterator[tuple[str, str]]:
+def rest_row(gap: Gap, scale: Scale, places: int) -> Iterator[tuple[str, str]]:
+    """What each strike at its own vol leaves of the gap, where that is the price."""
     if gap.rest is not None:
         yield "left of it", (f"{scale.show(gap.rest, places)} {scale.unit}, with each strike at its own vol, which "
                              "needs no model of levels")
+
+
+def rank_rows(ranking: Iterable[Ranked], scale: Scale) -> Iterator[tuple[str, ...]]:
+    """Quotes on one footing, each with the funding at which our price is the quote."""
+    for each in ranking:
+        funding = ("" if each.funding is None else
+                   f"{1e4 * each.funding:,.1f} ± {1e4 * each.funding_standard_error:,.1f} bp")
+        yield (str(each.rank), each.dealer, _or_none(each.bid, scale), scale.show(each.mid, 4),
+               _or_none(each.ask, scale), scale.show(each.gap, 4), ANSWERS[each.explained], funding)
+
+
+def corner(worst: WorstCorner, scale: Scale, places: int) -> str:
+    """What is said of the worst corner of the inputs."""
+    far = "" if worst.share == 1.0 else f" (at {worst.share:.3g} of them: there is no such market further out)"
+    return (f"worst corner, every input at the end of its half-width{far}: {scale.show(worst.price, places)} "
+            f"{scale.unit}, which {'reaches' if worst.reaches else 'does not reach'} the quote; never the band")
 
 
 def _or_none(number: float | None, scale: Scale) -> str:
     return "" if number is None else scale.show(number, 4)
 
 
-def _footed(number: float, error: float, scale: Scale, result: VerifyResult, step: int) -> str:
+def footed(number: float, error: float, scale: Scale, result: VerifyResult, step: int) -> str:
     """The quote after a step: the first one is still in the quote's own unit."""
     if step == 0 and result.quote.unit != "percent of notional":
         return fixed(number, 4)
@@ -117,20 +138,20 @@ def _move(share: float) -> str:
 def implied_row(each: ImpliedInput) -> tuple[str, ...]:
     """Where an input alone makes the model meet the quote, as words."""
     if each.value is None:
-        return each.input, each.asset, "none", "", f"{_signed(each.low)} to {_signed(each.high)}", NO_NUMBER[each.note]
+        return each.input, each.asset, "none", "", f"{signed(each.low)} to {signed(each.high)}", NO_NUMBER[each.note]
     if each.input in IN_PERCENT:
         error, number = 100.0 * each.standard_error, 100.0 * each.value
         sign = " %"
     else:
         error, number, sign = each.standard_error, each.value, ""
     places = decimals(error, 2, 2)
-    value = f"{fixed(number, places)}{sign}" if each.measure == "level" else _signed(each.value, places)
+    value = f"{fixed(number, places)}{sign}" if each.measure == "level" else signed(each.value, places)
     where = f"{value} at {each.tenor}" if each.tenor else value
     inside = {True: "yes", False: "no", None: "not stated"}[each.plausible]
-    return each.input, each.asset, where, f"{fixed(error, places)}{sign}", _signed(each.move, 2), inside
+    return each.input, each.asset, where, f"{fixed(error, places)}{sign}", signed(each.move, 2), inside
 
 
-def _signed(move: float, places: int = 1) -> str:
+def signed(move: float, places: int = 1) -> str:
     return f"{100.0 * move:+,.{places}f} %"
 
 
@@ -142,7 +163,7 @@ def _joint(result: VerifyResult, page: Page) -> None:
         return
     page.line(f"  {joint.half_widths:.2f} half-widths in all (root of squares; 1 is the edge of the input band)")
     page.table(("input", "", "half-widths", "move"), (
-        (each.input, each.asset, f"{each.half_widths:+.2f}", _signed(each.move, 2)) for each in joint.moves), words=2)
+        (each.input, each.asset, f"{each.half_widths:+.2f}", signed(each.move, 2)) for each in joint.moves), words=2)
 
 
 def _readings(result: VerifyResult, scale: Scale, places: int, page: Page) -> None:
@@ -168,30 +189,32 @@ def _short(note: str) -> str:
     return note if len(note) <= LONGEST_NOTE else f"{note[:LONGEST_NOTE].rsplit(' ', 1)[0]} … (whole in --json)"
 
 
+def money_rows(result: VerifyResult, scale: Scale, places: int) -> Iterator[tuple[str, str, str]]:
+    """Where the value lies, with errors."""
+    money, margin = result.money, result.margin
+    yield ("bond floor: the payments are worth no less than",
+           "none" if money.bond_floor is None else scale.show(money.bond_floor, places), "")
+    if money.ceiling is not None:
+        yield "the payments are worth no more than", scale.show(money.ceiling, places), ""
+    for part in money.parts or money.legs:
+        yield part.name, scale.show(part.price, places), scale.show(part.standard_error, places)
+    yield "our price", scale.show(result.price, places), scale.show(result.standard_error, places)
+    if money.funding is not None:
+        yield ("of which the issuer's funding spread", scale.show(money.funding, places),
+               scale.show(money.funding_standard_error, places))
+    if margin is not None:
+        yield "issue price", scale.show(margin.issue_price, places), ""
+        name = "issue price less our price (it has begun)" if margin.begun else "day-one margin"
+        yield name, scale.show(margin.price, places), scale.show(margin.standard_error, places)
+        if not margin.begun:
+            yield ("  for each year of expected life", scale.show(margin.per_year, places),
+                   scale.show(margin.per_year_standard_error, places))
+
+
 def _money(result: VerifyResult, scale: Scale, places: int, page: Page) -> None:
     money, margin = result.money, result.margin
-    page.heading("where the money is")
-
-    def rows() -> Iterator[tuple[str, str, str]]:
-        yield ("bond floor: the payments are worth no less than",
-               "none" if money.bond_floor is None else scale.show(money.bond_floor, places), "")
-        if money.ceiling is not None:
-            yield "the payments are worth no more than", scale.show(money.ceiling, places), ""
-        for part in money.parts or money.legs:
-            yield part.name, scale.show(part.price, places), scale.show(part.standard_error, places)
-        yield "our price", scale.show(result.price, places), scale.show(result.standard_error, places)
-        if money.funding is not None:
-            yield ("of which the issuer's funding spread", scale.show(money.funding, places),
-                   scale.show(money.funding_standard_error, places))
-        if margin is not None:
-            yield "issue price", scale.show(margin.issue_price, places), ""
-            name = "issue price less our price (it has begun)" if margin.begun else "day-one margin"
-            yield name, scale.show(margin.price, places), scale.show(margin.standard_error, places)
-            if not margin.begun:
-                yield ("  for each year of expected life", scale.show(margin.per_year, places),
-                       scale.show(margin.per_year_standard_error, places))
-
-    page.table(("", scale.unit, "error"), rows())
+    page.heading(MONEY)
+    page.table(("", scale.unit, "error"), money_rows(result, scale, places))
     if margin is not None:
         name = "difference" if margin.begun else "margin"
         page.line(f"  the {name} is {fixed(margin.value, 2)} {result.currency} for the whole trade, "
@@ -204,7 +227,7 @@ def _money(result: VerifyResult, scale: Scale, places: int, page: Page) -> None:
         page.line(f"  least and most of each of the {len(money.payments)} payments: --json")
 
 
-def _solved(each: SolvedTerm, scale: Scale) -> str:
+def solved(each: SolvedTerm, scale: Scale) -> str:
     looked = f"looked for from {each.low:.6g} to {each.high:.6g}"
     if each.value is None:
         return f"{each.note} ({looked}; stated is {each.stated:.6g})"

@@ -73,4 +73,4 @@ class Shares:
             return 0.0, 0.0
         one_note = number * self.contract.lot
         whole = math.floor(one_note * (1.0 + 1e-12))  # 10 that came out as 9.999999999999998
-        return float(whole), one_note - whole
+        return float(whole), max(one_note - whole, 0.0)

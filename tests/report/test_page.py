@@ -6,7 +6,11 @@ import json
 import math
 import re
 import subprocess
+import sys
+from dataclasses import dataclass
+from html import unescape
 from html.parser import HTMLParser
+from itertools import combinations
 from pathlib import Path
 from shutil import which
 from xml.etree import ElementTree
@@ -17,12 +21,10 @@ from front_door import EXAMPLES, mcx, refused, written
 from scipy.stats import norm
 
 import mcx as package
-from mcx.checked.load import checked_request
-from mcx.dates.dating import date_contract
-from mcx.estimators.ready import Ready, prepare
+from mcx.api.request import made_ready, read_request, sources
+from mcx.estimators.ready import Ready
 from mcx.machine.run import values_by_path
 from mcx.report.scene import Scene, scene
-from mcx.text.documents import read_documents
 
 NOTE = EXAMPLES / "harbour_lantern.yaml"
 CALL = """\
@@ -38,8 +40,12 @@ rates: {EUR: 4%}
 assets:
   harbour: {spot: 100, currency: EUR, yield: 1.5%, vol: {value: 22%, uncertain: 1%, source: broker}}
 """
+ALL = [*sorted(EXAMPLES.glob("*.yaml")), *sorted((Path(__file__).parents[1] / "corners").glob("*.yaml"))]
 PATHS = ("--paths", 4096)
-VERBS = {"price": (NOTE, (), 0), "greeks": (NOTE, ("--ladder",), 0), "verify": (EXAMPLES / "quoted_note.yaml", (), 1)}
+SVG = "{http://www.w3.org/2000/svg}"
+QUOTED = EXAMPLES / "quoted_note.yaml"
+VERBS = {"price": (NOTE, (*PATHS,), 0), "greeks": (NOTE, (*PATHS, "--ladder"), 0), "verify": (QUOTED, (*PATHS,), 1),
+         "methods": (NOTE, ("--paths", 4096), 0)}
 
 
 class Tags(HTMLParser):
@@ -57,6 +63,10 @@ class Tags(HTMLParser):
     def handle_data(self, data: str) -> None:
         self.texts.append(data)
 
+    @property
+    def said(self) -> str:
+        return " ".join(" ".join(self.texts).split())
+
 
 @pytest.fixture(scope="module")
 def pages(tmp_path_factory: pytest.TempPathFactory) -> dict[str, Path]:
@@ -64,7 +74,7 @@ def pages(tmp_path_factory: pytest.TempPathFactory) -> dict[str, Path]:
     folder = tmp_path_factory.mktemp("pages")
     files = {verb: folder / f"{verb}.html" for verb in VERBS}
     for verb, (note, more, code) in VERBS.items():
-        assert mcx(verb, note, *PATHS, *more, "--report", files[verb]).code == code
+        assert mcx(verb, note, *more, "--report", files[verb]).code == code
     return files
 
 
@@ -85,7 +95,7 @@ def test_a_page_asks_nothing_of_a_network(pages: dict[str, Path], verb: str):
 def test_every_picture_has_its_words(pages: dict[str, Path], verb: str):
     """Each is an image with a name, whose description says numbers."""
     found = re.findall(r"<svg.*?</svg>", pages[verb].read_text(encoding="utf-8"), re.DOTALL)
-    assert len(found) >= 4
+    assert len(found) >= (1 if verb == "methods" else 4)
     for text in found:
         picture = ElementTree.fromstring(text)
         assert picture.get("role") == "img"
@@ -95,10 +105,10 @@ def test_every_picture_has_its_words(pages: dict[str, Path], verb: str):
 
 def test_a_page_says_what_the_result_says(pages: dict[str, Path]):
     """The headline, every leg, condition, caution, term and input, the sum of each file, and the command."""
-    said = " ".join(Tags(pages["price"].read_text(encoding="utf-8")).texts)
+    said = Tags(pages["price"].read_text(encoding="utf-8")).said
     result = package.price(NOTE, paths=4096)
     for text in (result.contract, *(leg.name for leg in result.legs), *(each.name for each in result.conditions),
-                 *result.cautions, *result.limits, "call_barrier", "3m 17%; 1y 18%; 3y 19%",
+                 *result.cautions, *result.limits, "call_barrier", "3m 17%, 1y 18%, 3y 19%",
                  f"mcx price {NOTE} --paths 4096 --seed 1 --reduction none"):
         assert text in said, text
     assert len(set(re.findall(r"\b[0-9a-f]{64}\b", said))) == 2
@@ -106,33 +116,58 @@ def test_a_page_says_what_the_result_says(pages: dict[str, Path]):
 
 def test_the_command_finds_the_number_again(pages: dict[str, Path]):
     """What stands under 'to repeat it' gives the same sensitivities, to the last digit."""
-    said = " ".join(Tags(pages["greeks"].read_text(encoding="utf-8")).texts)
+    said = Tags(pages["greeks"].read_text(encoding="utf-8")).said
     command = re.search(r"mcx greeks \S+ (--paths .*?--spot-moves=\S+)", said)[1].split()
     again = mcx("greeks", NOTE, *command, "--json").json
     before = package.greeks(NOTE, paths=4096, spot_moves=again["spot_moves"])
     assert again["greeks"] == before.to_dict()["greeks"] and again["ladder"] == before.to_dict()["ladder"]
 
 
-def test_markup_in_a_title_stays_text(tmp_path: Path):
-    """Nothing in a document can become part of the page."""
-    evil = "<script>alert(1)</script><img src=x onerror=alert(2)> {{ 7 * 7 }} & \\\"'"
-    text = CALL.replace("Call", f'"{evil}"').replace("broker", '"</td><script>x</script>"')
-    for verb in ("price", "greeks"):
+EVIL = "<script>alert(1)</script><img src=x onerror=alert(2)> {{ 7 * 7 }} ]]> --> & ' $x$"
+
+
+def stays_text(file: Path) -> None:
+    """No tag comes of EVIL, in the page or inside a picture, and it stands there letter by letter."""
+    text = file.read_text(encoding="utf-8")
+    page = Tags(text)
+    assert not [tag for tag, _ in page.tags if tag in ("script", "img")]
+    assert not [key for _, attributes in page.tags for key in attributes if key.startswith("on")]
+    assert "<script>alert(1)</script>" in page.said and "{{ 7 * 7 }}" in page.said
+    for svg in re.findall(r"<svg.*?</svg>", text, re.DOTALL):
+        assert {node.tag.split("}")[1] for node in ElementTree.fromstring(svg).iter()} <= {
+            "svg", "title", "desc", "text", "line", "rect", "circle", "polyline", "polygon"}
+
+
+def test_markup_in_a_contract_stays_text(tmp_path: Path):
+    """A title, a source and a leg's name cannot become part of the page."""
+    text = CALL.replace("Call", json.dumps(EVIL)).replace("broker", '"</td><script>x</script>"')
+    for verb in ("price", "greeks", "methods"):
         file = tmp_path / f"{verb}.html"
         assert mcx(verb, written(tmp_path, text), *PATHS, "--report", file).code == 0
-        page = Tags(file.read_text(encoding="utf-8"))
-        assert not [tag for tag, _ in page.tags if tag in ("script", "img")]
-        assert any("<script>alert(1)</script>" in said and "{{ 7 * 7 }}" in said for said in page.texts)
+        stays_text(file)
+
+
+def test_markup_in_a_quote_stays_text(tmp_path: Path):
+    """A dealer, a source and the names of conditions and parts, which stand in pictures too."""
+    text = QUOTED.read_text(encoding="utf-8").replace("Saltmarsh dealing desk", json.dumps(EVIL))
+    text = text.replace("two brokers", json.dumps("</title></svg><script>alert(1)</script>"))
+    note = written(tmp_path, text.replace("payoff: barrier_reverse_convertible", "payoff: mine"), "note.yaml")
+    shipped = package.definition("barrier_reverse_convertible").text
+    mine = shipped.replace("payoff: barrier_reverse_convertible", "payoff: mine").replace(
+        "as: capital at risk", f"as: {json.dumps('</title><script>alert(1)</script>')}")
+    assert mine.count("alert(1)") > 1
+    file, picture = tmp_path / "verify.html", tmp_path / "verify.svg"
+    found = mcx("verify", note, written(tmp_path, mine, "mine.yaml"), *PATHS, "--report", file, "--picture", picture)
+    assert found.code == 1, found.err
+    stays_text(file)
+    assert ElementTree.parse(picture).findtext(f"{SVG}title")
 
 
 def surroundings(file: Path) -> tuple[Ready, Scene]:
     """The first contract of a file, ready to run, and what surrounds its number."""
-    documents, faults = read_documents([file])
-    made, faults = checked_request(documents, faults)
-    dated, wrong = date_contract(made.contracts[0], made.market.valuation)
-    ready, refusals = prepare(dated, made.market)
-    assert not (faults or wrong or refusals)
-    return ready, scene(ready, documents, "mcx price")
+    made, dated = read_request([file], with_market=True)
+    ready = next(iter(made_ready(made, dated)))
+    return ready, scene(ready, sources(made), "mcx price")
 
 
 def test_quantiles_are_those_of_the_law(tmp_path: Path):
@@ -172,6 +207,84 @@ def test_the_profile_is_what_the_contract_pays():
     assert [each.points[-1][1] for each in lantern if each.name == "call barrier"] == [pytest.approx(90.0)]
 
 
+@pytest.mark.parametrize("file", ALL, ids=lambda file: file.stem)
+def test_every_example_has_surroundings(file: Path):
+    """Each shipped contract and each of the grammar's corners: finite numbers in order, for a page."""
+    made, dated = read_request([file, *file.parent.glob(f"{file.stem}.csv")], with_market=True)
+    for ready in made_ready(made, dated):
+        found = scene(ready, sources(made), "mcx price")
+        assert np.isfinite(np.array(found.profile)).all() and (found.profile or ready.dated.last.time <= 0.0)
+        for fan in found.fans:
+            quantiles = np.array([fan.quantiles[share] for share in sorted(fan.quantiles)])
+            assert np.isfinite(quantiles).all() and (np.diff(quantiles, axis=0) >= 0.0).all()
+            assert all(np.isfinite(np.array(line.points)).all() for line in fan.barriers)
+
+
+HIT = """\
+contract: Hit
+currency: EUR
+units: 1
+assets: [harbour]
+payoff: mine
+terms: {barrier: 120, watched: {continuous: [0y, 2y]}}
+---
+payoff: mine
+about: Pays the years until a level is reached.
+assets: 1
+pays: money per unit
+terms:
+  barrier: {type: level}
+  watched: {type: watch}
+running:
+  touched: {ever: spot >= barrier, at: watched}
+events:
+  - {at: {once: touched}, pay: years}
+---
+"""
+
+
+def test_the_moment_of_a_hit_on_a_straight_line(tmp_path: Path):
+    """A line in logs that ends beyond a barrier is there in proportion; one that ends before it pays nothing."""
+    _, found = surroundings(written(tmp_path, HIT + CALL.split("---\n")[1]))
+    for final, years in found.profile:
+        expected = 2 * math.log(1.2) / math.log(final / 100) if final >= 120 else 0.0
+        assert years == pytest.approx(expected, abs=1e-9)
+
+
+def test_many_assets_and_dates(tmp_path: Path):
+    """A basket of 12 assets that is averaged over 80 days, under a long title: three fans, the others by name."""
+    names = [f"asset_{number:02d}" for number in range(12)]
+    title = "Ein sehr langer Titel mit Ümlauten, 長い題名 und allem, was dazu gehört, " * 3
+    contract = {"contract": title, "currency": "EUR", "units": 1, "assets": names, "payoff": "mine",
+                "terms": {"strike": 100, "days": {"count": 80, "until": "1y"}, "expiry": "1y"}}
+    text = f"""{json.dumps(contract, ensure_ascii=False)}
+---
+payoff: mine
+about: A call on the average.
+assets: 1 or more
+pays: money per unit
+terms:
+  strike: {{type: number}}
+  days: {{type: dates}}
+  expiry: {{type: date}}
+running:
+  level: {{average: mean(spot), at: days}}
+events:
+  - {{at: expiry, pay: "max(level - strike, 0)"}}
+---
+market: 0y
+rates: {{EUR: 4%}}
+assets: {{{", ".join(f"{name}: {{spot: 100, currency: EUR, yield: 1%, vol: 20%}}" for name in names)}}}
+correlation: {{{", ".join(f"{one}/{other}: 50%" for one, other in combinations(names, 2))}}}
+"""
+    file = tmp_path / "page.html"
+    found = mcx("price", written(tmp_path, text), *PATHS, "--report", file, "--picture", tmp_path / "page.png")
+    assert found.code == 0, found.err
+    page = Tags(file.read_text(encoding="utf-8"))
+    assert title.strip() in page.said and "asset_11" in page.said
+    assert sum(tag == "svg" for tag, _ in page.tags) >= 5
+
+
 def test_where_a_page_cannot_be_written(tmp_path: Path):
     """It is said before the work; an old page is replaced."""
     refused(mcx("price", NOTE, *PATHS, "--report", tmp_path / "no" / "page.html"), "there is no folder")
@@ -182,16 +295,62 @@ def test_where_a_page_cannot_be_written(tmp_path: Path):
     assert file.read_text(encoding="utf-8").startswith("<!DOCTYPE html>")
 
 
+# Pictures as files
+
+@pytest.mark.parametrize("verb", VERBS)
+def test_a_picture_file_has_the_pictures_of_the_page(pages: dict[str, Path], verb: str, tmp_path: Path):
+    """The same titles in the same order, and the same words and shapes but for the time that a run took."""
+    note, more, code = VERBS[verb]
+    file = tmp_path / "pictures.svg"
+    assert mcx(verb, note, *more, "--picture", file).code == code
+    parts = ElementTree.parse(file).getroot().findall(f"{SVG}svg")
+    shown = [ElementTree.fromstring(svg) for svg in
+             re.findall(r"<svg.*?</svg>", pages[verb].read_text(encoding="utf-8"), re.DOTALL)]
+    assert [part.findtext(f"{SVG}title") for part in parts] == [each.findtext(f"{SVG}title") for each in shown]
+    for part, each in zip(parts, shown, strict=True) if verb != "methods" else ():
+        assert part.findtext(f"{SVG}desc") == each.findtext(f"{SVG}desc")
+        assert [node.attrib for node in list(part)[2:]] == [node.attrib for node in list(each)[2:]]
+
+
+def test_where_pictures_cannot_be_drawn(tmp_path: Path, monkeypatch: pytest.MonkeyPatch):
+    """Said before the work, with nothing written: another suffix, no folder, a folder, several contracts, no
+    matplotlib for .png, which .svg does without."""
+    for verb, (note, more, code) in VERBS.items():
+        refused(mcx(verb, note, *more, "--picture", tmp_path / "a.pdf"), ".png or .svg, by the suffix")
+        refused(mcx(verb, note, *more, "--picture", tmp_path / "no" / "a.svg"), "there is no folder")
+        (tmp_path / "folder.svg").mkdir(exist_ok=True)
+        refused(mcx(verb, note, *more, "--picture", tmp_path / "folder.svg"), "this is a folder")
+    refused(mcx("price", EXAMPLES / "autocall.yaml", *PATHS, "--picture", tmp_path / "a.svg"),
+            "a picture shows one contract; the files hold 2")
+    monkeypatch.setitem(sys.modules, "matplotlib", None)
+    refused(mcx("price", NOTE, *PATHS, "--picture", tmp_path / "a.png"), "needs the package 'matplotlib'")
+    assert not [file for file in tmp_path.rglob("*") if file.is_file()]
+    assert mcx("price", NOTE, *PATHS, "--picture", tmp_path / "a.svg").code == 0
+
+
+def test_several_contracts_have_their_answers_first(tmp_path: Path):
+    """One table with every contract and its answer, then a sheet for each."""
+    file = tmp_path / "page.html"
+    table = package.price(EXAMPLES / "autocall.yaml", paths=4096, report=file)
+    text = file.read_text(encoding="utf-8")
+    overview = text[text.index('class="overview"'):text.index("<article")]
+    assert all(each.contract in overview for each in table.prices) and overview.count("±") == 2
+    assert text.count("<article") == 2
+
+
 # In a notebook
 
 def test_results_show_themselves():
-    """A price and sensitivities as HTML with pictures; other results leave it to their text."""
-    price, greeks = package.price(NOTE, paths=4096), package.greeks(NOTE, paths=4096)
-    for result in (price, greeks):
+    """Prices, sensitivities, verdicts and comparisons as HTML with pictures; other results leave it to their text."""
+    results = (package.price(NOTE, paths=4096), package.greeks(NOTE, paths=4096), package.verify(QUOTED, paths=4096),
+               package.methods(NOTE, paths=4096))
+    for result in results:
         shown = Tags(result._repr_html_())
         assert result.contract in " ".join(shown.texts) and "svg" in {tag for tag, _ in shown.tags}
         assert not {"html", "body", "script"} & {tag for tag, _ in shown.tags}
-    assert package.payoffs()._repr_html_() is None
+    for result in (package.payoffs(), package.readback(NOTE), package.readback(NOTE, calendar=True),
+                   results[0].legs[0]):
+        assert result._repr_html_() is None and repr(result)
     assert package.price(EXAMPLES / "autocall.yaml", paths=4096)._repr_html_().count("<article") == 2
 
 
@@ -199,11 +358,19 @@ def test_rows_of_results():
     """Legs of a price, sensitivities, contracts of a table: what is no list, as plain numbers."""
     price, greeks = package.price(NOTE, paths=4096), package.greeks(NOTE, paths=4096)
     assert price.rows() == [each.to_dict() for each in price.legs]
-    assert greeks.rows() == [each.to_dict() for each in greeks.greeks]
+    said = [each.to_dict() for each in greeks.greeks]
+    assert greeks.rows() == [{key: value for key, value in row.items() if key != "interval95"} for row in said]
     table = package.price(EXAMPLES / "autocall.yaml", paths=4096)
     assert [row["price"] for row in table.rows()] == [each.price for each in table.prices]
     assert not [value for row in table.rows() for value in row.values() if isinstance(value, list | dict)]
     assert json.dumps(table.rows())
+
+
+def test_a_frame_without_pandas(monkeypatch: pytest.MonkeyPatch):
+    """It says what is missing, and that the same rows can be had without it."""
+    monkeypatch.setitem(sys.modules, "pandas", None)
+    with pytest.raises(ImportError, match=r"needs the package 'pandas', which is not installed; rows\(\) gives"):
+        package.payoffs().to_frame()
 
 
 def test_frames():
@@ -218,32 +385,102 @@ def test_frames():
 # In a browser
 
 BROWSER = next(filter(None, map(which, ("chromium", "chromium-browser", "google-chrome", "chrome"))), None)
+needs_browser = pytest.mark.skipif(BROWSER is None, reason="no browser is installed that runs without a screen")
+DARK = "--blink-settings=preferredColorScheme=0"
 
 
-def printed(page: Path, folder: Path) -> tuple[int, list[str]]:
-    """How many pages a browser without a screen prints, and what it says on its console."""
-    target = folder / "page.pdf"
+@dataclass(frozen=True)
+class Seen:
+    """What a browser did with a page: printed pages, lines on its console, addresses that the page asked for."""
+
+    pages: int
+    console: tuple[str, ...]
+    asked: frozenset[str]
+
+
+def browse(page: Path, folder: Path, *more: str) -> subprocess.CompletedProcess:
+    """A browser without a screen, whose every name leads nowhere."""
     done = subprocess.run([BROWSER, "--headless", "--no-sandbox", "--disable-gpu", "--disable-dev-shm-usage",
                            "--disable-background-networking", "--no-first-run", f"--user-data-dir={folder / 'browser'}",
-                           "--enable-logging=stderr", "--host-resolver-rules=MAP * ~NOTFOUND", "--no-pdf-header-footer",
-                           f"--print-to-pdf={target}", page.as_uri()], capture_output=True, text=True, timeout=120)
+                           "--host-resolver-rules=MAP * ~NOTFOUND", *more, page.as_uri()],
+                          capture_output=True, text=True, timeout=120)
     assert done.returncode == 0, done.stderr
-    said = [line for line in done.stderr.splitlines() if ":CONSOLE" in line]
-    return len(re.findall(rb"/Type\s*/Page\b", target.read_bytes())), said
+    return done
 
 
-@pytest.mark.skipif(BROWSER is None, reason="no browser is installed that runs without a screen")
+def printed(page: Path, folder: Path) -> Seen:
+    """Prints a page on A4, with the browser's own log of its network."""
+    target, log = folder / "page.pdf", folder / "net.json"
+    done = browse(page, folder, "--enable-logging=stderr", "--no-pdf-header-footer", f"--print-to-pdf={target}",
+                  f"--log-net-log={log}")
+    of_page = r'"initiator":"(?!not an origin)[^"]*".*?"url":"((?!file:|data:)[^"]+)"'  # the others are the browser's
+    asked = frozenset(re.findall(of_page, log.read_text(encoding="utf-8", errors="replace")))
+    return Seen(len(re.findall(rb"/Type\s*/Page\b", target.read_bytes())),
+                tuple(line for line in done.stderr.splitlines() if ":CONSOLE" in line), asked)
+
+
+@needs_browser
 @pytest.mark.parametrize("verb", VERBS)
 def test_in_a_browser(pages: dict[str, Path], verb: str, tmp_path: Path):
-    """A page prints to two pages at most and tries nothing that its own policy forbids: no request, no script."""
-    count, said = printed(pages[verb], tmp_path)
-    assert 1 <= count <= 2 and not said
+    """A page prints to two pages at most and tries nothing that its own policy forbids; no request leaves."""
+    seen = printed(pages[verb], tmp_path)
+    assert 1 <= seen.pages <= 2 and not seen.console and not seen.asked
 
 
-@pytest.mark.skipif(BROWSER is None, reason="no browser is installed that runs without a screen")
-def test_the_policy_of_a_page_is_kept(pages: dict[str, Path], tmp_path: Path):
-    """What somebody adds to a page cannot load or run: the browser says so, which the test above would see."""
+@needs_browser
+def test_what_a_page_asks_for_would_be_seen(pages: dict[str, Path], tmp_path: Path):
+    """What somebody adds to a page cannot load or run: the browser says so. Without its policy the request leaves,
+    which the log shows."""
     text = pages["price"].read_text(encoding="utf-8")
     added = "<img src='http://example.org/x.png'><script>console.log('ran')</script></main>"
-    _, said = printed(written(tmp_path, text.replace("</main>", added), "added.html"), tmp_path)
-    assert len(said) == 2 and all("Content Security Policy" in line for line in said)
+    seen = printed(written(tmp_path, text.replace("</main>", added), "added.html"), tmp_path)
+    assert len(seen.console) == 2 and all("Content Security Policy" in line for line in seen.console)
+    assert not [each for each in seen.asked if "example.org" in each]
+    bare = re.sub("<meta http-equiv[^>]*>", "", text.replace("</main>", added))
+    assert "http://example.org/x.png" in printed(written(tmp_path, bare, "bare.html"), tmp_path).asked
+
+
+MEASURE = """<script>
+const found = [];
+for (const svg of document.querySelectorAll('svg')) {
+  const frame = svg.getBoundingClientRect(), title = svg.querySelector('title').textContent;
+  const texts = [...svg.querySelectorAll('text')].map(node => [node.textContent, node.getBoundingClientRect()]);
+  texts.forEach(([words, box], number) => {
+    if (box.left < frame.left - 2 || box.right > frame.right + 2 || box.top < frame.top - 3
+        || box.bottom > frame.bottom + 3) found.push(`${title}: '${words}' is cut`);
+    for (const [other, there] of texts.slice(number + 1))
+      if (box.left < there.right - 1 && there.left < box.right - 1 && box.top + 3 < there.bottom - 3
+          && there.top + 3 < box.bottom - 3) found.push(`${title}: '${words}' runs into '${other}'`);
+  });
+}
+const page = document.documentElement;
+if (page.scrollWidth > innerWidth + 1) found.push(`the page is ${page.scrollWidth} wide, the window ${innerWidth}`);
+const style = getComputedStyle(document.body);
+document.title = JSON.stringify({found, ink: style.color, paper: style.backgroundColor});
+</script></body>"""
+
+
+def measured(page: Path, folder: Path, width: int, *more: str) -> dict:
+    """Where words of pictures meet or are cut, and the inks, as a browser lays a page out in a window."""
+    text = re.sub("<meta http-equiv[^>]*>", "", page.read_text(encoding="utf-8")).replace("</body>", MEASURE)
+    done = browse(written(folder, text, "measured.html"), folder, f"--window-size={width},900", "--dump-dom", *more)
+    return json.loads(unescape(re.search("<title>(.*?)</title>", done.stdout, re.DOTALL)[1]))
+
+
+@needs_browser
+@pytest.mark.parametrize("verb", VERBS)
+def test_words_do_not_meet(pages: dict[str, Path], verb: str, tmp_path: Path):
+    """On a desk and on a telephone; light paper and, for who asks for it, dark paper."""
+    light, dark = measured(pages[verb], tmp_path, 1280), measured(pages[verb], tmp_path, 500, DARK)
+    assert light == {"found": [], "ink": "rgb(26, 26, 26)", "paper": "rgb(255, 255, 255)"}
+    assert dark == {"found": [], "ink": "rgb(236, 236, 236)", "paper": "rgb(22, 22, 22)"}
+
+
+@needs_browser
+def test_words_that_meet_would_be_seen(pages: dict[str, Path], tmp_path: Path):
+    """A word that is laid over another, and one beyond the picture's edge."""
+    text = pages["price"].read_text(encoding="utf-8")
+    added = '<text x="5" y="30">over</text><text x="5" y="30">another</text><text x="399" y="90">beyond</text></svg>'
+    found = measured(written(tmp_path, text.replace("</svg>", added, 1), "added.html"), tmp_path, 1280)["found"]
+    for said in ("'over' runs into 'another'", "'beyond' is cut"):
+        assert any(said in line for line in found)

@@ -17,7 +17,8 @@ class Facts:
 
 @dataclass(frozen=True, slots=True)
 class Table:
-    """Rows below heads; the first `words` columns hold words, and those from `tail` on."""
+    """Rows below heads; the first `words` columns hold words, and those from `tail` on. `wide` ones take the whole
+    width of a page."""
 
     title: str
     heads: tuple[str, ...]
@@ -25,6 +26,7 @@ class Table:
     words: int = 1
     tail: int = 99
     note: str = ""
+    wide: bool = False
     kind: str = "table"
 
 
@@ -35,12 +37,13 @@ class Picture:
     title: str
     svg: str
     note: str = ""
+    wide: bool = False
     kind: str = "picture"
 
 
 @dataclass(frozen=True, slots=True)
 class Notes:
-    """Sentences."""
+    """Sentences, or (by its kind 'command') words for a prompt, which are never broken at a hyphen."""
 
     title: str
     items: tuple[str, ...]
@@ -49,18 +52,31 @@ class Notes:
 
 @dataclass(frozen=True, slots=True)
 class Sheet:
-    """One contract's part of a page: the answer in large letters, then blocks; wide ones take the whole width."""
+    """One contract's part of a page: the answer in large letters, then blocks."""
 
     title: str
     answer: str
     below: str
     blocks: tuple[Facts | Table | Picture | Notes, ...]
 
+    @property
+    def pictures(self) -> list[tuple[str, str]]:
+        """Titles and SVGs."""
+        return [(block.title, block.svg) for block in self.blocks if isinstance(block, Picture)]
+
+
+LEFT_OUT = "more with --json: {}"
+
 
 def cut(rows: Sequence[tuple[str, ...]], most: int) -> tuple[tuple[tuple[str, ...], ...], str]:
     """No more rows than a printed page has room for, and a word about those left out."""
     left = len(rows) - most
-    return tuple(map(tuple, rows[:most])), f"more with --json: {left}" if left > 0 else ""
+    return tuple(map(tuple, rows[:most])), LEFT_OUT.format(left) if left > 0 else ""
+
+
+def few(texts: Sequence[str], most: int) -> tuple[str, ...]:
+    """The same for sentences; the word about the rest is the last of them."""
+    return (*texts[:most], *([LEFT_OUT.format(len(texts) - most)] if len(texts) > most else []))
 
 
 def notes(*named: tuple[str, Sequence[str]]) -> tuple[Notes, ...]:

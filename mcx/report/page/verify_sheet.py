@@ -6,12 +6,22 @@ from collections.abc import Iterator
 
 from mcx.estimators.verify import MODEL
 from mcx.report.page.blocks import Facts, Notes, Picture, Sheet, Table, cut, notes
-from mcx.report.page.price_sheet import INTERVALS, evidence, model_table, surroundings
-from mcx.report.pictures.draw import Bar, bars, gap_ladder
-from mcx.report.price_view import Scale
+from mcx.report.page.price_sheet import INTERVALS, evidence, leg_bars, model_table, surroundings
+from mcx.report.pictures.draw import Bar, Rung, bars, gap_ladder, moves
+from mcx.report.price_scale import Scale
 from mcx.report.scene import Scene
-from mcx.report.verify_results import VerifyResult
-from mcx.report.verify_view import ANSWERS, implied_row
+from mcx.report.verify_results import ImpliedInput, VerifyResult
+from mcx.report.verify_view import (
+    ANSWERS,
+    IN_PERCENT,
+    MONEY,
+    corner,
+    footed,
+    implied_row,
+    money_rows,
+    rest_row,
+    solved,
+)
 
 MOST_INPUTS, MOST_IMPLIED = 12, 18
 
@@ -28,46 +38,93 @@ def verify_sheet(result: VerifyResult, scene: Scene | None) -> Sheet:
         ("on our footing", mid),
         ("our price", f"{price}, standard error {scale.show(result.standard_error, places)}"),
         ("gap", f"{apart}, standard error {scale.show(gap.standard_error, places)} (quote less our price)"),
+        *rest_row(gap, scale, places),
         ("valued on", result.valuation or "time 0"),
         ("paths", f"{result.paths:,}; seed {result.seed}; variance reduction: {result.reduction}"))),
         *_ladder(result, scale, places)]
     blocks += notes(("what closes it", result.leads))
-    blocks += [*_implied(result), *_inputs(result, scale, places), *_readings(result, scale, places)]
-    blocks += model_table(result.model_bracket, scale, result.standard_error)
+    blocks += [*_implied(result), *_inputs(result, scale, places), *_readings(result, scale, places),
+               *model_table(result.model_bracket, scale, result.standard_error), *_footing(result, scale),
+               *_money(result, scale, places)]
     blocks += surroundings(scene, scale.unit) if scene else ()
     blocks += notes(("warnings", result.warnings), ("assumptions", result.assumptions or ("none",)))
     blocks += evidence(scene) if scene else ()
     blocks += notes(("not in the model", result.limits), ("read it with care", result.cautions))
-    return Sheet(result.contract, result.verdict, "Errors are those of sampling only.", tuple(blocks))
+    return Sheet(result.contract, result.verdict, f"Errors are those of sampling only. {INTERVALS}",
+                 tuple(blocks))
 
 
 def _ladder(result: VerifyResult, scale: Scale, places: int) -> Iterator[Picture | Table]:
-    """The gap against each band; a band that was not stated, and the model bracket, which does not lie evenly about the
-    price, are in the table only."""
-    bands = [(band.name, scale.factor * band.half_width, ANSWERS[band.holds])
+    """The gap against each band, the model bracket where it lies; one that was not stated is in the table only."""
+    bands = [Rung(band.name, -scale.factor * band.half_width, scale.factor * band.half_width, ANSWERS[band.holds])
              for band in result.bands if band.half_width is not None and band.name != MODEL]
-    gap, bar, words = result.gap.price, "gap", "the gap"
-    if result.gap.rest is not None:  # each strike at its own vol is the price
-        gap, bar, words = result.gap.rest, "left of the gap", "what each strike at its own vol leaves of the gap"
+    gap, bar, words, model = result.gap.price, "gap", "the gap", result.model_bracket
+    if result.gap.rest is not None:  # each strike at its own vol is the price, and no other end of the bracket
+        gap, bar, words, model = result.gap.rest, "left of the gap", "what is left of the gap", None
+    bands += [Rung(band.name, *(scale.factor * (end - result.compared) for end in (model.lower, model.upper)),
+                   ANSWERS[band.holds]) for band in result.bands
+              if band.name == MODEL and model is not None and model.lower is not None]
     apart, error = scale.factor * gap, scale.factor * result.gap.standard_error
     shown = scale.show(gap, places)
-    said = f"{words[0].upper()}{words[1:]}: {shown} {scale.unit}; " + "; ".join(
-        f"{name} ± {half:.4g}: holds it: {holds}" for name, half, holds in bands) + "."
-    yield Picture(f"{words} and what may hold it, each by itself",
-                  gap_ladder(f"{words} and what may hold it", said, Bar(bar, apart, error, shown), bands), said)
+    said = f"{bar[0].upper()}{bar[1:]}: {shown} {scale.unit}; " + "; ".join(
+        f"{band.name} from {band.low:.4g} to {band.high:.4g}: holds it: {band.said}" for band in bands) + "."
+    title = f"{words} and what may hold it, each by itself"
+    yield Picture(title, gap_ladder(title, said, Bar(bar, apart, error, shown), bands, scale.unit),
+                  "The gap is held where its broken line meets the band.")
     yield Table("in numbers", ("", f"half-width, {scale.unit}", "holds it"), tuple(
         (band.name, "not stated" if band.half_width is None else scale.show(band.half_width, places),
-         ANSWERS[band.holds]) for band in result.bands), tail=2)
+         ANSWERS[band.holds]) for band in result.bands), tail=2,
+        note="" if result.worst_corner is None else corner(result.worst_corner, scale, places))
 
 
-def _implied(result: VerifyResult) -> Iterator[Table | Notes]:
-    rows, left = cut([implied_row(each) for each in result.implied], MOST_IMPLIED)
-    heads = ("input", "", "value", "error", "move", "inside its doubt")
-    yield Table("what would have to be true, each input alone", heads, rows, words=2, tail=5, note=left)
+def _implied(result: VerifyResult) -> Iterator[Picture | Table | Notes]:
+    """Where each input alone meets the quote, against the band that was stated for it."""
+    halves = {(each.input, each.asset): each.half_width for each in result.inputs if each.half_width}
+    drawn = [_in_halves(each, halves[each.input, each.asset]) for each in result.implied
+             if each.move is not None and (each.input, each.asset) in halves][:MOST_INPUTS]
+    if drawn:
+        title = "implied inputs, in half-widths of their stated bands"
+        said = "Half-widths from the market to where the input alone meets the quote: " + ", ".join(
+            f"{row.name} {row.value:+.2f}" for row in drawn) + "."
+        yield Picture(title, moves(title, said, drawn, "half-widths; shaded: inside the band"))
+    rows, left = cut([(*implied_row(each)[:-1], _move(halves.get((each.input, each.asset))), implied_row(each)[-1])
+                      for each in result.implied], MOST_IMPLIED)
+    heads = ("input", "", "value", "error", "move", "± stated", "inside")
+    yield Table("what would have to be true, each input alone", heads, rows, words=2, tail=6, note=left)
     if result.joint is not None:
-        moves = (f"{' '.join(filter(None, (each.input, each.asset)))} by {each.half_widths:+.2f} of its half-width"
+        found = (f"{' '.join(filter(None, (each.input, each.asset)))} by {each.half_widths:+.2f} of its half-width"
                  for each in result.joint.moves)
-        yield Notes(f"smallest joint move: {result.joint.half_widths:.2f} half-widths in all", tuple(moves))
+        yield Notes(f"smallest joint move: {result.joint.half_widths:.2f} half-widths in all", tuple(found))
+
+
+def _in_halves(each: ImpliedInput, half: float) -> Bar:
+    """A move in half-widths; the error of a forward's level as a share, as its move is."""
+    share = 1.0 if each.input in IN_PERCENT or each.measure == "move" else (1.0 + each.move) / each.value
+    return Bar(" ".join(filter(None, (each.input, each.asset))), each.move / half,
+               abs(each.standard_error * share / half), implied_row(each)[2].split(" at ")[0])
+
+
+def _move(share: float | None) -> str:
+    return "" if share is None else f"{100.0 * share:.4g} %"
+
+
+def _footing(result: VerifyResult, scale: Scale) -> Iterator[Table]:
+    """How the quote was brought on our footing."""
+    yield Table("the quote on our footing", ("step", "", "quote"), tuple(
+        (line.step, line.text, footed(line.quote, line.standard_error, scale, result, number))
+        for number, line in enumerate(result.footing)), words=2)
+
+
+def _money(result: VerifyResult, scale: Scale, places: int) -> Iterator[Picture | Table | Notes]:
+    """Legs, floor, ceiling and margin; and what a term would have to be."""
+    if len(result.money.legs) > 1:
+        rows = [(leg.name, scale.show(leg.price, places)) for leg in result.money.legs]
+        yield from leg_bars("legs", result.money.legs, rows, scale)
+    yield Table(MONEY, ("", scale.unit, "error"), tuple(money_rows(result, scale, places)))
+    if result.solved:
+        first = result.solved[0]
+        yield Notes(f"the {first.term} at which the contract is worth {scale.show(first.target, places)} {scale.unit}",
+                    tuple(solved(each, scale) for each in result.solved))
 
 
 def _inputs(result: VerifyResult, scale: Scale, places: int) -> Iterator[Picture]:
@@ -78,7 +135,7 @@ def _inputs(result: VerifyResult, scale: Scale, places: int) -> Iterator[Picture
                     scale.factor * each.standard_error, scale.show(each.change, places)) for each in order]
         said = f"In {scale.unit}: " + ", ".join(f"{row.name} {row.shown}" for row in rows) + "."
         title = "what each input's half-width does to the price"
-        yield Picture(title, bars(title, said, rows), INTERVALS)
+        yield Picture(f"{title}, {scale.unit}", bars(title, said, rows))
 
 
 def _readings(result: VerifyResult, scale: Scale, places: int) -> Iterator[Table]:
