@@ -62,10 +62,18 @@ def test_what_has_no_joint_law_is_refused(what: str, asset: str):
 @pytest.mark.parametrize("what", [
     "first", "first if up else 0", "first ** 2", "exp(-first) * of(spot, harbour)", "first + other",
     "2 * first - other * of(spot, harbour) + (3 if down else 0)", "(1 if up and not down else 0) + min(first, 0.5)",
+    "first if of(spot, harbour) > 100 else other",
 ])
 def test_what_is_a_sum_of_moments_alone_is_not(what: str):
     dated, _ = date_contract(request_of(kept(what)).contracts[0], None)
     assert not unroll(dated, nodes=()).faults
+
+
+def test_moments_of_hits_apart_in_time_share_their_draws():
+    """One normal and one uniform serve every moment, so two of them have no product even where they cannot meet."""
+    text = kept("first * other", early="{continuous: [0y, 0.5y]}", late="{continuous: [0.5y, 1y]}")
+    dated, _ = date_contract(request_of(text).contracts[0], None)
+    assert {fault.place.line for fault in unroll(dated, nodes=()).faults} == {14, 16}
 
 
 def test_a_moment_and_a_flag_of_another_time():
