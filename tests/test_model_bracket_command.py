@@ -71,6 +71,8 @@ def test_an_autocall_is_indicative():
 
 @pytest.mark.parametrize(("contract", "said"), [
     (CALL, ("100 (100% of the spot)", "every payment depends on one level of one date")),
+    (CALL.replace("strike: 100", "strike: 130"),
+     ("130 (130% of the spot, beyond the", "and beyond them, where they are taken as flat")),
     (CLIQUET, ("of one to come", "indicative only", "that is no certainty", "live on forward vol and forward skew")),
 ])
 def test_the_text(tmp_path, contract, said):
@@ -159,7 +161,10 @@ def test_a_price_without_a_model_is_what_a_quote_is_held_against(tmp_path, price
         assert band["holds"] == (None if band["half_width"] is None else abs(rest) <= band["half_width"])
     assert found["bands"][-1]["holds"] is (code == 0)
     assert found["bands"][-1]["half_width"] == pytest.approx(found["compared"] - bracket["strip"][0], abs=1e-12)
-    text = " ".join(mcx("verify", file, *ASKED).out.split())
+    page = tmp_path / "page.html"
+    text = " ".join(mcx("verify", file, *ASKED, "--report", page).out.split())
+    for words in ("left of it", "Left of the gap: "):
+        assert words in page.read_text(), words
     z = rest / found["gap"]["standard_error"]
     for words in ("left of it", "what may hold what is left of the gap", f"what is left is z = {z:+.1f}"):
         assert words in text, words

@@ -35,8 +35,10 @@ def show_model(found: ModelBracketResult, scale: Scale, standard_error: float, p
     if found.strikes:
         page.line(f"  errors are those of the difference from the headline price, on the same {found.paths:,} paths")
     if found.exact:
+        beyond = any(each.beyond for one in found.strikes for each in one.assets)
         page.line("  every payment depends on one level of one date: at the vols of its own strikes the price needs no "
-                  "model of levels, only the vols between the strikes that are quoted")
+                  "model of levels, only the vols between the strikes that are quoted"
+                  f"{', and beyond them, where they are taken as flat' if beyond else ''}")
     if found.indicative:
         page.line("  indicative only:")
         page.items(found.indicative)

@@ -414,6 +414,28 @@ def test_cash_dividends_and_fixed_rates_of_exchange(more):
     assert abs(one.change.value - truth) < 4.0 * one.change.standard_error + slack
 
 
+def test_a_cash_dividend_between_two_observations():
+    """What of the level half-way is the dividend still to come is certain; the vol of the strike is that of the rest."""
+    text = payment("spot / 100", "max(85 - spot, 0) + (10 if spot < 85 else 0)")
+    quoted = market(by_strike(SMILES["linear skew"])).replace("yield: 2.0%", "dividends: [{ex: 0.75y, cash: 8}]")
+    found, _ = bracket_of(text + quoted, paths=4096)
+    certain = 8.0 * exp(-RATE * 0.25)
+    forward = SPOT * exp(RATE * 0.5) - certain
+
+    def price(strike: float, vol: float) -> float:
+        deviation = vol * sqrt(0.5)
+        left = strike - certain
+        d1 = log(forward / left) / deviation + deviation / 2
+        return exp(-RATE * 0.5) * (left * norm.cdf(deviation - d1) - forward * norm.cdf(-d1))
+
+    def worth(vol_at: Callable[[float], float]) -> float:
+        below = (price(85.01, vol_at(85.01)) - price(84.99, vol_at(84.99))) / 0.02
+        return price(85.0, vol_at(85.0)) + 10.0 * below
+
+    truth = worth(lambda at: 0.42 - 0.002 * at) - worth(lambda at: 0.22)
+    assert found.strip == pytest.approx((truth, truth), abs=2e-5)
+
+
 def test_a_rate_of_exchange_of_the_day():
     """A strike in the contract's currency is one of the asset's own over the rate of exchange of today; the vol of the
     rate is in both prices."""
