@@ -10,7 +10,8 @@ from test_watching import ALWAYS, COUNTED, TWO, bounds
 
 from mcx.dates.dating import date_contract
 from mcx.estimators.batches import Sampling
-from mcx.estimators.ready import prepare
+from mcx.estimators.bracket import PIECES, refine
+from mcx.estimators.ready import made, prepare
 from mcx.estimators.term import solve_term
 from mcx.machine.run import Stream
 
@@ -60,3 +61,19 @@ def test_a_term_is_solved_with_the_steps_of_the_price():
     assert abs(prices[0] - prices[1]) > 1e-3
     (found,) = solve_term(fine, request.market, "lower", prices[1], sampling).solutions.found
     assert abs(found.move - 85.0) < 1e-3
+
+
+def test_steps_are_as_fine_as_a_target_asks_and_no_finer():
+    """The bounds are closer than the target by the pilot, and were not with the steps tried before."""
+    request = request_of(COUNTED + document("counted", assets="[harbour, lantern]", lower=85, upper=1e9, watched=ALWAYS,
+                                            dates="1y", expiry="1y") + TWO.replace("RHO", "30%"))
+    dated, _ = date_contract(request.contracts[0], None)
+    here = prepare(dated, request.market)[0].market
+    widths = [refine(lambda number: made(dated, here, number), 1.0, seed=SEED, pieces=number)[2].width
+              for number in PIECES[:4]]
+    found = []
+    for target in (0.2, *(0.9 * (width.value + 2.0 * width.standard_error) for width in widths[:3])):
+        refinement = refine(lambda number: made(dated, here, number), target, seed=SEED)[2]
+        assert refinement.reached and refinement.width.value < refinement.target == target
+        found.append(refinement.pieces)
+    assert tuple(found) == PIECES[:4]
