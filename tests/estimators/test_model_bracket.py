@@ -4,6 +4,7 @@ package's strips."""
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import replace
 from functools import cache
 from math import exp, log, sqrt
 
@@ -15,9 +16,11 @@ from scipy.stats import norm
 
 from mcx.dates.dating import date_on
 from mcx.estimators.batches import Sampling
-from mcx.estimators.model_bracket import ModelBracket, model_bracket
+from mcx.estimators.estimate import Estimate
+from mcx.estimators.model_bracket import AtStrike, ModelBracket, model_bracket
 from mcx.estimators.ready import Ready, prepare
 from mcx.estimators.revalue import Revaluer
+from mcx.estimators.verify import Band, beyond, model_band
 from mcx.leaves.jacobian import inputs, moved
 from mcx.leaves.smile import at_strikes, butterflies
 
@@ -434,6 +437,19 @@ def test_a_cash_dividend_between_two_observations():
 
     truth = worth(lambda at: 0.42 - 0.002 * at) - worth(lambda at: 0.22)
     assert found.strip == pytest.approx((truth, truth), abs=2e-5)
+
+
+@pytest.mark.parametrize(("gap", "rest", "reach"), [
+    (4.0, 2.0, 2.0), (1.5, 0.0, 2.0), (0.25, -0.75, 2.0), (-1.0, -2.0, 0.0)])
+def test_what_a_price_between_two_slopes_leaves_of_a_gap(gap, rest, reach):
+    """The strip from +1 to +2 about the headline; the price at the vol of one level, +3, is known to be wrong."""
+    away = AtStrike((("harbour", 80.0),), (("harbour", 0.3),), False, Estimate(3.0, 0.1, 64), ())
+    exactly = ModelBracket((away,), (1.0, 2.0), True, (), 64)
+    assert beyond(gap, *exactly.settled) == rest
+    for held in (True, False):
+        assert model_band(exactly, gap, held) == Band("model bracket", reach, held)
+    assert model_band(replace(exactly, exact=False), gap) == Band("model bracket", 3.0 if gap > 0.0 else 0.0,
+                                                                  1.0 <= gap <= 3.0)
 
 
 def test_a_rate_of_exchange_of_the_day():
