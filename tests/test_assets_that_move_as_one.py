@@ -62,6 +62,9 @@ def test_two_are_one_to_the_last_digits(lower: tuple, upper: tuple, one: tuple):
     ("1y: 22%}, dividends: [{ex: 0.4y, share: 1.5%}]}\n  q", "1y: 22.1%}, dividends: [{ex: 0.4y, share: 1.5%}]}\n  q"),
     ("share: 1.5%}]}\n  quarry", "share: 1.6%}]}\n  quarry"),
     ("share: 1.5%}]}\n  quarry", "cash: 1}]}\n  quarry"),
+    ("spot: 40, currency: EUR, yield: {6m: 1%, 1y: 2.5%}, vol: {3m: 30%, 6m: 25%, 1y: 22%}",
+     "spot: 40, currency: EUR, yield: {6m: 1%, 1y: 2.5%}, vol: {strikes: {80%: {3m: 31%, 6m: 26%, 1y: 23%}, "
+     "100%: {3m: 30%, 6m: 25%, 1y: 22%}}, priced_at: 100%}"),
 ])
 def test_what_differs_is_between_bounds(old: str, new: str):
     """Not quite perfect correlation, another growth or another vol: the law is known between bounds only, and the one
@@ -164,3 +167,20 @@ def test_a_quote_is_met_on_markets_that_part_them(tmp_path: Path):
                 "uncertainty: {vol: 1%, yield: 0.2%, correlation: 5%, funding: 10 bp, rates: 5 bp}\n" + QUOTE)
     found, exact = mcx.verify(case, paths=2**12), mcx.price(case, paths=2**12)
     assert 1e-6 < abs(found.price - exact.price) < 2 * exact.standard_error
+
+
+def test_a_vol_moved_alone_is_refused_wherever_it_is_asked_for(tmp_path: Path):
+    """The chances of assets that are watched as one hold for no market in which only one of their vols has moved: a
+    revaluation does not show it and a grid refuses it, while one that takes both along is that of the worse alone."""
+    both = note(tmp_path, "[harbour, lantern]", "{harbour: 4180.2, lantern: 55}")
+    one = note(tmp_path, "[lantern]", "{lantern: 55}")
+    asked = {"paths": 2**13, "vol_moves": ["0%", "5%"]}
+    found = mcx.greeks(both, bump="1%", **asked)
+    revalued = {line.name for line in found.comparison}
+    assert "vega" not in revalued and "yield" in revalued
+    assert sum("would part them" in warning for warning in found.warnings) == 4
+    still, part = mcx.greeks(both, assets="lantern", **asked).grid
+    assert still.price == found.price and np.isnan(part.price) and "would part them" in part.refused
+    wanted, point = mcx.greeks(one, **asked).grid[1], found.grid[1]
+    error = np.hypot(point.change_standard_error, wanted.change_standard_error)
+    assert point.change < -20 * error and abs(point.change - wanted.change) < 4 * error

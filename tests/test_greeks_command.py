@@ -317,3 +317,15 @@ def test_between_bounds_everything_is_about_the_middle(tmp_path: Path):
     assert "sensitivities are those of the middle" in " ".join(shown.out.split())
     again = mcx("replay", record, "--json")
     assert again.code == 0 and again.json["identical"]
+
+
+@pytest.mark.parametrize("corner", sorted((Path(__file__).parent / "corners").glob("*.yaml")), ids=lambda file: file.stem)
+def test_every_corner_has_sensitivities_or_reasons(corner: Path):
+    """Of each contract every sensitivity is a number or is refused in words, theta included: a node of a curve may be
+    one calendar day before a date that cuts a watch."""
+    found = mcx("greeks", corner, "--paths", PATHS, "--json")
+    assert found.code == 0, found.err
+    for each in found.json.get("contracts", [found.json]):
+        named = {greek["name"] for greek in each["greeks"]} | {greek["name"] for greek in each["refused"]}
+        assert "theta" in named
+        assert all(greek["reason"] for greek in each["refused"])

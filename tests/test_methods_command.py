@@ -118,6 +118,14 @@ def test_what_does_not_apply_says_why(tmp_path: Path):
     refused(mcx("price", rare, "--reduction", "controls"), "no 'controls', since of 262,144 pilot paths only 0 differ")
 
 
+def test_a_choice_that_needs_more_paths_says_so(average: Path):
+    """The others run: pairs of points are two paths each."""
+    found = mcx("methods", average, "--paths", 2048, "--json").json
+    assert "sobol-bridge" in {each["method"] for each in found["methods"]}
+    assert {each["method"]: each["reason"] for each in found["not_applied"]}["antithetic,sobol-bridge"] == (
+        "it takes 4,096 paths or more, and 2,048 were asked for")
+
+
 def test_a_hedger_is_told_what_is_left(average: Path):
     """The more dates, the less risk; the price is the same."""
     found = package.price(average, paths=20_000, reduction="hedge")

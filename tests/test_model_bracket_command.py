@@ -60,9 +60,9 @@ def test_an_autocall_is_indicative():
     bracket = priced()[AUTOCALL]["model_bracket"]
     assert not bracket["exact"]
     assert bracket["strip"] == []
-    assert len(bracket["indicative"]) == 2
-    assert "ends early" in bracket["indicative"][0]
-    assert "several assets" in bracket["indicative"][1]
+    assert len(bracket["indicative"]) == 3
+    for words, said in zip(("sells another", "ends early", "several assets"), bracket["indicative"], strict=True):
+        assert words in said
     knock_in = bracket["strikes"][0]
     assert [each["level"] for each in knock_in["assets"]] == [37.41, 2508.12]
     assert knock_in["skewed"][1] - knock_in["skewed"][0] > 0.005  # two slopes of vol
@@ -71,6 +71,8 @@ def test_an_autocall_is_indicative():
 
 @pytest.mark.parametrize(("contract", "said"), [
     (CALL, ("100 (100% of the spot)", "every payment depends on one level of one date")),
+    (CALL.replace("strike: 100", "strike: 130"),
+     ("130 (130% of the spot, beyond the", "and beyond them, where they are taken as flat")),
     (CLIQUET, ("of one to come", "indicative only", "that is no certainty", "live on forward vol and forward skew")),
 ])
 def test_the_text(tmp_path, contract, said):
@@ -112,11 +114,16 @@ terms: {end: 1y}
 """
 
 
-@pytest.mark.parametrize(("price", "holds"), [(4.81, True), (7.11, False), (3.90, False)])
+MEAN = SPREAD.replace("(100 - spot", "(100 - closes").replace("(80 - spot", "(80 - closes").replace(
+    "events:", "running:\n  closes:\n    average: spot\n    at: fixings\nevents:").replace(
+    "terms:\n", "terms:\n  fixings: {type: dates}\n").replace("{end: 1y}", "{end: 1y, fixings: [6m, 1y]}")
+
+
+@pytest.mark.parametrize(("price", "holds"), [(5.7, True), (6.9, False), (4.6, False)])
 def test_the_verdict(tmp_path, price, holds):
     """A quote inside the bracket is explained by it alone, one outside is not; on neither side of the price is the
     bracket as wide."""
-    file = written(tmp_path, SPREAD + MARKET.replace("vol: 22%", f"vol: {VOLS}") + QUOTE % price)
+    file = written(tmp_path, MEAN + MARKET.replace("vol: 22%", f"vol: {VOLS}") + QUOTE % price)
     found = mcx("verify", file, *ASKED, "--json").json
     bracket, band = found["model_bracket"], found["bands"][-1]
     assert band["name"] == "model bracket"
@@ -126,9 +133,65 @@ def test_the_verdict(tmp_path, price, holds):
     assert band["half_width"] == pytest.approx(abs(end - found["compared"]), abs=1e-12)
     assert ("inside the model bracket, outside the sampling error" in found["verdict"]) is holds
     assert any("Explained by the model bracket alone" in lead for lead in found["leads"]) is holds
-    assert any("With each strike at its own vol" in lead for lead in found["leads"])
+    assert found["gap"]["rest"] is None
     text = mcx("verify", file, *ASKED).out
     assert "model bracket (apart from sampling and inputs)" in text
+
+
+@pytest.mark.parametrize(("price", "more", "code", "said"), [
+    (4.71, "", 0, "is left; it is inside the sampling error."),
+    (5.00, "bid_offer: 1\n", 0, "is left; it is inside half the bid-offer, outside the sampling error."),
+    (5.30, "", 1, "is left, and nothing that was stated holds it: it is outside the sampling error."),  # in the bracket
+    (5.96, "", 1, "is left, and nothing that was stated holds it: it is outside the sampling error."),  # the headline
+    (3.90, "tolerance: 0.5\n", 1, "it is outside the sampling error and the stated tolerance."),
+])
+def test_a_price_without_a_model_is_what_a_quote_is_held_against(tmp_path, price, more, code, said):
+    """Where each strike at its own vol is the price, a quote that only the wrong ends of the bracket or the headline
+    reach is not explained."""
+    file = written(tmp_path, SPREAD + MARKET.replace("vol: 22%", f"vol: {VOLS}") + QUOTE % price + more)
+    outcome = mcx("verify", file, *ASKED, "--json")
+    found, bracket = outcome.json, outcome.json["model_bracket"]
+    assert bracket["exact"] and bracket["lower"] < price < bracket["upper"] or price == 3.90
+    rest = price - bracket["strip"][0]
+    assert found["gap"]["rest"] == pytest.approx(rest, abs=1e-12)
+    assert (outcome.code, found["explained"]) == (code, code == 0)
+    assert found["verdict"].startswith("With each strike at its own vol ")
+    assert found["verdict"].endswith(said)
+    for band in found["bands"][:-1]:
+        assert band["holds"] == (None if band["half_width"] is None else abs(rest) <= band["half_width"])
+    assert found["bands"][-1]["holds"] is (code == 0)
+    assert found["bands"][-1]["half_width"] == pytest.approx(found["compared"] - bracket["strip"][0], abs=1e-12)
+    page = tmp_path / "page.html"
+    text = " ".join(mcx("verify", file, *ASKED, "--report", page).out.split())
+    for words in ("left of it", "Left of the gap: "):
+        assert words in page.read_text(), words
+    z = rest / found["gap"]["standard_error"]
+    for words in ("left of it", "what may hold what is left of the gap", f"what is left is z = {z:+.1f}"):
+        assert words in text, words
+
+
+def test_a_fixed_rate_of_exchange_is_only_indicative(tmp_path):
+    text = CALL.replace("assets: [harbour]", "assets: [harbour]\nconversion: {harbour: quanto}")
+    quanto = f"quanto: {{fx_vol: 9%, fx_correlation: -20%, fx: EUR per USD}}, vol: {VOLS}"
+    market = MARKET.replace("vol: 22%", quanto).replace("rates: {", "rates: {USD: 4%, ")
+    file = written(tmp_path, text + market.replace("currency: EUR, yield", "currency: USD, yield"))
+    bracket = mcx("price", file, *ASKED, "--json").json["model_bracket"]
+    assert not bracket["exact"]
+    assert [one for one in bracket["indicative"] if "harbour goes under skew with a rate of exchange" in one
+            and "keeps the forward of the headline" in one]
+
+
+@pytest.mark.parametrize("verb", ["price", "greeks", "verify", "methods"])
+def test_every_verb_names_the_strike_whose_vols_it_takes(tmp_path, verb):
+    file = written(tmp_path, CALL + MARKET.replace("vol: 22%", f"vol: {VOLS}") + QUOTE % 9.5)
+    assumed = mcx(verb, file, "--paths", 4096, "--json").json["assumptions"]
+    assert any("the vols of harbour at 100% of the spot, as its market says, and so do sensitivities" in one
+               for one in assumed)
+
+
+def test_a_market_to_fill_in_says_how_vols_by_strike_are_written():
+    text = mcx("payoffs", "european", "--blank", "--assets", "harbour").out
+    assert "strikes: {80%: {1y: 21%}, 100%: {1y: 18%}}, priced_at: 100%" in text
 
 
 def test_the_bracket_stands_at_the_spot_of_the_quote(tmp_path):

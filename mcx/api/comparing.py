@@ -42,11 +42,12 @@ def methods(
     from mcx.report.method_results import MethodsTable
     from mcx.report.method_summary import methods_result
 
+    contracts = made_ready(made, dated)
     asked, results = sampling.precision, []
-    for ready in made_ready(made, dated):
+    for ready in contracts:
         with finite(ready):
             case = Case(ready, sampling.seed, means.threads, means.notice)
             found, refused = compare(case, asked.seconds, asked.paths)
         results.append(methods_result(ready, made.market, found, refused, sampling.seed, asked.words))
-    write_outputs("methods", files, made, dated, results, wanted)
+    write_outputs("methods", files, made, contracts, results, wanted)
     return results[0] if len(results) == 1 else MethodsTable(tuple(results))

@@ -6,13 +6,13 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
-from mcx.api.request import made_ready, sources
+from mcx.api.request import sources
 from mcx.api.sampling import File
 from mcx.faults import RequestError
 
 if TYPE_CHECKING:
     from mcx.checked.load import Request
-    from mcx.dates.dated_contract import DatedContract
+    from mcx.estimators.ready import Ready
     from mcx.report.page.blocks import Sheet
     from mcx.report.results import Result
 
@@ -53,7 +53,7 @@ def write_outputs(
     verb: str,
     files: Sequence[File],
     made: Request,
-    dated: Sequence[DatedContract],
+    contracts: Sequence[Ready],
     results: Sequence[Result],
     wanted: Outputs,
 ) -> None:
@@ -64,7 +64,7 @@ def write_outputs(
         write_record(wanted.record, make_record(sources(made), [each.to_dict() for each in results], verb))
     if wanted.report is None and wanted.picture is None:
         return
-    found = _sheets(verb, files, made, dated, results)
+    found = _sheets(verb, files, made, contracts, results)
     if wanted.report is not None:
         from mcx.report.page.render import page, write_page
 
@@ -80,7 +80,7 @@ def _sheets(
     verb: str,
     files: Sequence[File],
     made: Request,
-    dated: Sequence[DatedContract],
+    contracts: Sequence[Ready],
     results: Sequence[Result],
 ) -> list[Sheet]:
     """What was found beside its surroundings, with the command that finds it again."""
@@ -88,9 +88,7 @@ def _sheets(
     from mcx.report.repeat import command
     from mcx.report.scene import scene
 
-    wanted = {result.contract for result in results}
-    ready = {each.dated.contract.title: each
-             for each in made_ready(made, [each for each in dated if each.contract.title in wanted])}
+    ready = {each.dated.contract.title: each for each in contracts}
     documents = sources(made)
     return sheets(results, [scene(ready[result.contract], documents, command(verb, files, result))
                             for result in results])

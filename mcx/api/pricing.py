@@ -10,9 +10,9 @@ from mcx.api.outputs import check_one, outputs_of, write_outputs
 from mcx.api.request import made_ready, read_request
 from mcx.api.sampling import File, Means, Notice, Progress, Sampling, check_sampling, means_of, sampling_of
 from mcx.checked.load import Request
-from mcx.dates.dated_contract import DatedContract
 
 if TYPE_CHECKING:
+    from mcx.estimators.ready import Ready
     from mcx.report.results import PriceResult, PriceTable
 
 
@@ -46,15 +46,16 @@ def price(
     made, dated = read_request(files, with_market=True)
     check_sampling(sampling, made.contracts)
     check_one(wanted, len(dated), "contract")
-    table = price_all(made, dated, [sampling] * len(dated), means)
+    contracts = made_ready(made, dated)
+    table = price_all(made, contracts, [sampling] * len(dated), means)
     wanted = replace(wanted, record=None) if table.interrupted else wanted
-    write_outputs("price", files, made, dated, table.prices, wanted)
+    write_outputs("price", files, made, contracts, table.prices, wanted)
     return table.prices[0] if len(made.contracts) == 1 else table
 
 
 def price_all(
     made: Request,
-    dated: Sequence[DatedContract],
+    contracts: Sequence[Ready],
     samplings: Sequence[Sampling],
     means: Means,
     pieces: Sequence[int | None] | None = None,
@@ -67,7 +68,7 @@ def price_all(
     from mcx.report.summary import price_result
 
     results = []
-    for ready, sampling, number in zip(made_ready(made, dated), samplings, pieces or [None] * len(dated), strict=True):
+    for ready, sampling, number in zip(contracts, samplings, pieces or [None] * len(contracts), strict=True):
         try:
             with finite(ready):
                 valuation = value(ready, sampling.precision, seed=sampling.seed, reduction=sampling.reduction,
@@ -79,4 +80,4 @@ def price_all(
         results.append(price_result(valuation.ready, made.market, valuation))
         if valuation.interrupted:
             break
-    return PriceTable(tuple(results), tuple(each.contract.title for each in dated[len(results):]))
+    return PriceTable(tuple(results), tuple(each.dated.contract.title for each in contracts[len(results):]))

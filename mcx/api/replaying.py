@@ -5,7 +5,7 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 from mcx.api.pricing import price_all
-from mcx.api.request import dated_contracts
+from mcx.api.request import dated_contracts, made_ready
 from mcx.api.sampling import File, Notice, Progress, Sampling, checked_seed, means_of
 from mcx.api.sensitivities import greeks_of_all
 from mcx.api.verifying import verify_all
@@ -39,23 +39,24 @@ def replay(
     if made.market is None or len(runs) != there:
         what = "quotes" if verb == "verify" else "contracts"
         raise RequestError(f"{file}: the record has {len(runs)} requests for the {there} {what} in its inputs")
+    contracts = made_ready(made, dated, apart=verb == "verify")
     samplings = [Sampling(precision(each["paths"], None, None), checked_seed(each["seed"]),
                           wished(each.get("reduction", NONE))) for each in runs]
     brackets = [each.get("bracket") for each in stored["results"]]
     pieces = [bracket and bracket["pieces"] for bracket in brackets]
     if verb == "verify":
         wishes = [(each["solve"], each["target"]) for each in runs]
-        results = verify_all(made, dated, wishes, samplings, means)
+        results = verify_all(made, contracts, wishes, samplings, means)
     elif verb == "greeks":
         from mcx.estimators.wishes import wish_of
 
         keys = ("estimator", "bump", "assets", "spot_moves", "vol_moves")
         wishes = [wish_of(*(each[key] for key in keys)) for each in runs]
-        sensitivities = greeks_of_all(made, dated, wishes, samplings, means, pieces)
+        sensitivities = greeks_of_all(made, contracts, wishes, samplings, means, pieces)
         _check_whole(sensitivities)
         results = sensitivities.contracts
     else:
-        prices = price_all(made, dated, samplings, means, pieces)
+        prices = price_all(made, contracts, samplings, means, pieces)
         _check_whole(prices)
         results = prices.prices
     return compare(stored, [each.to_dict() for each in results], environment())

@@ -20,11 +20,11 @@ from mcx.api.sampling import (
 )
 from mcx.checked.contract import Contract
 from mcx.checked.load import Request
-from mcx.dates.dated_contract import DatedContract
 from mcx.faults import RequestError, did_you_mean
 
 if TYPE_CHECKING:
     from mcx.estimators.greeks import Wish
+    from mcx.estimators.ready import Ready
     from mcx.report.greek_results import GreeksResult, GreeksTable
 
 
@@ -70,9 +70,10 @@ def greeks(
     check_sampling(sampling, made.contracts)
     _check_assets(wish, made.contracts)
     check_one(wanted, len(dated), "contract")
-    table = greeks_of_all(made, dated, [wish] * len(dated), [sampling] * len(dated), means)
+    contracts = made_ready(made, dated)
+    table = greeks_of_all(made, contracts, [wish] * len(dated), [sampling] * len(dated), means)
     wanted = replace(wanted, record=None) if table.interrupted else wanted
-    write_outputs("greeks", files, made, dated, table.contracts, wanted)
+    write_outputs("greeks", files, made, contracts, table.contracts, wanted)
     return table.contracts[0] if len(made.contracts) == 1 else table
 
 
@@ -85,7 +86,7 @@ def _check_assets(wish: Wish, contracts: Iterable[Contract]) -> None:
 
 def greeks_of_all(
     made: Request,
-    dated: Sequence[DatedContract],
+    contracts: Sequence[Ready],
     wishes: Sequence[Wish],
     samplings: Sequence[Sampling],
     means: Means,
@@ -98,8 +99,8 @@ def greeks_of_all(
     from mcx.report.greek_summary import greeks_result
 
     results = []
-    pieces = pieces or [None] * len(dated)
-    for ready, wish, sampling, number in zip(made_ready(made, dated), wishes, samplings, pieces, strict=True):
+    pieces = pieces or [None] * len(contracts)
+    for ready, wish, sampling, number in zip(contracts, wishes, samplings, pieces, strict=True):
         try:
             with finite(ready):
                 found = sensitivities(ready, made.market, wish, sampling.precision, seed=sampling.seed, pieces=number,
@@ -112,4 +113,4 @@ def greeks_of_all(
         results.append(greeks_result(found.ready, made.market, wish, found))
         if found.interrupted:
             break
-    return GreeksTable(tuple(results), tuple(each.contract.title for each in dated[len(results):]))
+    return GreeksTable(tuple(results), tuple(each.dated.contract.title for each in contracts[len(results):]))

@@ -19,10 +19,10 @@ from mcx.api.sampling import (
     sampling_of,
 )
 from mcx.checked.load import Request
-from mcx.dates.dated_contract import DatedContract
 from mcx.faults import RequestError
 
 if TYPE_CHECKING:
+    from mcx.estimators.ready import Ready
     from mcx.report.verify_results import VerifyResult, VerifyTable
 
 
@@ -64,8 +64,9 @@ def verify(
         check_target(target, notional=each.notional is not None, title=each.title)
     count = len(made.quotes)
     check_one(wanted, count, "quote")
-    results = verify_all(made, dated, [wish] * count, [sampling] * count, means)
-    write_outputs("verify", files, made, dated, results, wanted)
+    contracts = made_ready(made, dated, apart=True)
+    results = verify_all(made, contracts, [wish] * count, [sampling] * count, means)
+    write_outputs("verify", files, made, contracts, results, wanted)
     if count == 1:
         return results[0]
     from mcx.report.verify_summary import verify_table
@@ -75,7 +76,7 @@ def verify(
 
 def verify_all(
     made: Request,
-    dated: Sequence[DatedContract],
+    contracts: Sequence[Ready],
     wishes: Sequence[tuple[str, float | None]],
     samplings: Sequence[Sampling],
     means: Means,
@@ -85,7 +86,7 @@ def verify_all(
     from mcx.estimators.verify import Bench
     from mcx.report.verify_summary import verify_result
 
-    ready = {each.dated.contract.title: each for each in made_ready(made, dated, apart=True)}
+    ready = {each.dated.contract.title: each for each in contracts}
     benches: dict[tuple[str, Sampling], Bench] = {}
     results = []
     for quote, wish, sampling in zip(made.quotes, wishes, samplings, strict=True):

@@ -1,7 +1,7 @@
 """How fine the steps must be where several assets are watched together, so that the two bounds are close enough.
 
 What of several assets happens within a step is known between bounds only, and the bounds close as the steps shorten.
-Steps are halved until the bounds of the price are closer than the error that the run aims at, by a pilot run of a
+Steps are halved until the bounds of the price are closer than a share of the error that the run aims at, by a pilot run of a
 fixed size from its own stream: the same seed and wish give the same steps.
 """
 

@@ -39,6 +39,7 @@ from mcx.estimators.revalue import (
 from mcx.estimators.sensitivities import Curvature, Sensitivity, first_order, second_order
 from mcx.estimators.theta import between, theta
 from mcx.leaves.jacobian import Input, inputs, moved, without_derivative
+from mcx.leaves.market_map import MarketMap
 from mcx.machine.run import Notice, Stream, values_by_path
 from mcx.tape.smooth import Jump
 
@@ -158,8 +159,7 @@ class _Run:
         begun = time.perf_counter()
         kinks = {self.numbers.index(number): reason
                  for number, reason in without_derivative(self.market, self.contract).items()}
-        kinks |= {k: AS_ONE for k, number in enumerate(self.numbers) if number.kind == "vol"
-                  and number.subject in {self.contract.assets[asset] for asset in self.ready.unrolled.joined}}
+        kinks |= {k: AS_ONE for k, number in enumerate(self.numbers) if self._parts(number)}
         values = [*self._first(kinks), *self._second()]
         base, price = self.base or self.revaluer.price(self.market, self.sampling)
         comparison: list[Value] = []
@@ -177,6 +177,11 @@ class _Run:
         return Found(price, tuple(values), tuple(self.refused), tuple(comparison), tuple(self.choices),
                      self.methods.jumps, tuple(rungs), tuple(points), tuple(self.notes), self.plan, self.sampling.seed,
                      self.drawn.names, time.perf_counter() - begun, self.ready, self.refinement, self.interrupted)
+
+    def _parts(self, number: Input) -> bool:
+        """Whether a number that is moved alone parts assets that are watched as one."""
+        return number.kind == "vol" and number.subject in {self.contract.assets[asset]
+                                                           for asset in self.ready.unrolled.joined}
 
     def _wanted(self, subject: str) -> bool:
         """Whether an asset's or a pair's line was asked for; a currency's always is."""
@@ -325,7 +330,7 @@ class _Run:
             if any(column in line.columns for line in self.lines):
                 step = step_of(number, size)
                 reasons = (impossible(self.market, self.contract, {number: side * step}) for side in (1.0, -1.0))
-                reason = next(filter(None, reasons), "")
+                reason = AS_ONE if self._parts(number) else next(filter(None, reasons), "")
                 if reason:
                     self.notes.append(f"no revaluation for the {number}: moved by ±{step:g}, {reason}")
                 else:
@@ -350,8 +355,16 @@ class _Run:
     def _grid(self, base: Batches) -> tuple[Point, ...]:
         if not self.wish.vol_moves:
             return ()
+        joined = {asset: leader for asset, leader in self.ready.market.makeup(self.ready.apart).leaders.items()
+                  if asset in self.ready.unrolled.joined}
+
+        def parted(there: Market) -> str:
+            """Why the tape does not hold on a market: assets that it watches as one are so no more."""
+            left = MarketMap.of(there, self.ready.dated).makeup().leaders if joined else {}
+            return AS_ONE if any(left.get(asset) != leader for asset, leader in joined.items()) else ""
+
         return grid(self.revaluer, self.market, self._moving(), self.wish.spot_moves or (0.0,), self.wish.vol_moves,
-                    self.sampling, base)
+                    self.sampling, base, parted)
 
     def _ladder(self, base: Batches) -> tuple[Step, ...]:
         if not self.wish.spot_moves:

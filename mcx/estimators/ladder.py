@@ -74,16 +74,16 @@ def ladder(
 
 def grid(
     revaluer: Revaluer, market: Market, numbers: Sequence[Input], spot_moves: Sequence[float],
-    vol_moves: Sequence[float], sampling: Sampling, base: Batches,
+    vol_moves: Sequence[float], sampling: Sampling, base: Batches, refused: Callable[[Market], str],
 ) -> tuple[Point, ...]:
     """The price at every pair of moves: spots by a share of themselves, every vol by a sum. `base` is the price as it
-    stands."""
+    stands; `refused` says why the tape does not hold on a market, '' where it does."""
     found = []
     for vol_move in vol_moves:
         vols = {number: vol_move for number in numbers if number.kind == "vol"}
         for move in spot_moves:
             shifts = {**spot_shifts(numbers, move), **vols}
-            reason = impossible(market, revaluer.contract, shifts)
+            reason = impossible(market, revaluer.contract, shifts) or refused(moved(market, shifts))
             if reason:
                 found.append(Point(move, vol_move, None, None, reason))
                 continue

@@ -15,7 +15,7 @@ The lowest and the highest of them are the bracket. No lognormal model can do be
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -26,7 +26,7 @@ from mcx.estimators.estimate import Estimate
 from mcx.estimators.ready import Ready
 from mcx.estimators.revalue import Revaluer
 from mcx.leaves.market_map import MarketMap
-from mcx.leaves.smile import LevelLaw, at_strikes, law
+from mcx.leaves.smile import LevelLaw, at_strikes, laws
 from mcx.tape.jump_put import jump_put
 from mcx.tape.pieces import Piece, pieces
 from mcx.tape.program import Tape
@@ -36,6 +36,7 @@ from mcx.tape.strikes import READ, Strike, price_alone, strikes
 MOST_PATHS = 1 << 17  # differences on the same paths are known better than a price
 SLOPE = 1e-3  # share of a level over which the slope of vol in strike is taken
 SIDES = (-1.0, 1.0)
+ENDS = (min, max)
 
 
 @dataclass(frozen=True, slots=True)
@@ -54,8 +55,9 @@ class AtStrike:
 @dataclass(frozen=True, slots=True)
 class ModelBracket:
     """Prices less the headline price: at each strike, and `strip`, with every payment that depends on one level at the
-    vols of its own strikes (with the slope of vol below and above each; empty where there is none). `exact`: these are
-    all payments that differ from path to path. `headline_vols`: those of the headline price, to its last observation.
+    vols of its own strikes (the lowest and the highest by the slopes of vol on both sides of each; empty where there is
+    none). `exact`: these are all payments that differ from path to path, of levels in the contract's own currency.
+    `headline_vols`: those of the headline price, to its last observation.
     """
 
     strikes: tuple[AtStrike, ...]
@@ -63,6 +65,11 @@ class ModelBracket:
     exact: bool
     headline_vols: tuple[tuple[str, float], ...]
     paths: int
+
+    @property
+    def settled(self) -> tuple[float, float] | None:
+        """Where the strip is the price, the lowest and the highest that it is less the headline price."""
+        return (self.strip[0], self.strip[-1]) if self.exact else None
 
     @property
     def changes(self) -> tuple[Estimate, ...]:
@@ -101,7 +108,8 @@ def model_bracket(ready: Ready, market: Market, sampling: Sampling) -> ModelBrac
     at = tuple(_at_strike(runs, strike, None if ready.dated.hits else jump_put(tape, known, strike, end, spots), end)
                for strike in found)
     strip, whole = pieces(tape, known, found)
-    return ModelBracket(at, _strip(market, ready, here, strip), whole and bool(strip),
+    apart = {contract.assets[piece.asset] for piece in strip} & set(contract.conversion)  # that of its rate is not said
+    return ModelBracket(at, _strip(market, ready, here, strip), whole and not apart,
                         tuple((name, here.vol_to(name, end)) for name in contract.assets), sampling.paths)
 
 
@@ -153,26 +161,22 @@ def _strip(market: Market, ready: Ready, here: MarketMap, strip: Sequence[Piece]
     if not strip:
         return ()
     contract = ready.dated.contract
-    changes = [0.0 for _ in SIDES]
+    by_vols = {asset: [laws(market, contract, here, contract.assets[asset], smile) for smile in (False, True)]
+               for asset in {piece.asset for piece in strip}}
+    changes = [0.0 for _ in ENDS]
     for piece in strip:
-        name = contract.assets[piece.asset]
-        flat, smile = (law(market, contract, here, name, piece.time, by_strike) for by_strike in (False, True))
-        for number, side in enumerate(SIDES):
-            changes[number] += worth(piece, smile, side) - worth(piece, flat, side)
+        flat, smile = (worth(piece, law(piece.time)) for law in by_vols[piece.asset])
+        changes = [change + at - before for change, at, before in zip(changes, smile, flat, strict=True)]
     return tuple(changes)
 
 
-def worth(piece: Piece, under: LevelLaw, side: float) -> float:
-    """The mean of a function of a level that is straight between its breaks: a line, puts and digitals; `side` as for
-    the law's chances."""
-    return math.fsum(_terms(piece, under, side))
-
-
-def _terms(piece: Piece, under: LevelLaw, side: float) -> Iterator[float]:
-    puts = [under.put(level) for level in piece.breaks]
-    chances = [under.below(level, side) for level in piece.breaks]
-    for k, (put, chance) in enumerate(zip(puts, chances, strict=True)):
-        yield (piece.below[k] - piece.above[k]) * chance
-        yield (piece.slopes[k + 1] - piece.slopes[k]) * put
-    yield piece.above[-1]
-    yield piece.slopes[-1] * (under.forward - piece.breaks[-1])  # the call less the put
+def worth(piece: Piece, under: LevelLaw) -> tuple[float, ...]:
+    """The mean of a function of a level that is straight between its breaks: a line, puts and digitals; the lowest and
+    the highest by the slopes of vol beside each strike, which go apart at the two ends of a range."""
+    terms = [piece.above[-1], piece.slopes[-1] * (under.forward - piece.breaks[-1])]  # the call less the put
+    digitals = []
+    for k, level in enumerate(piece.breaks):
+        terms.append((piece.slopes[k + 1] - piece.slopes[k]) * under.put(level))
+        jump = piece.below[k] - piece.above[k]
+        digitals.append([jump * under.below(level, side) for side in SIDES] if jump else [0.0])
+    return tuple(math.fsum((*terms, *map(end, digitals))) for end in ENDS)

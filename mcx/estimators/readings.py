@@ -69,17 +69,19 @@ def value_readings(
     paths: int,
     seed: int,
     pieces: int = 1,
+    apart: bool = False,
     threads: int | None = None,
     progress: Progress | None = None,
     notice: Notice | None = None,
 ) -> ReadingsValuation:
-    """The values of a contract's other readings; the contract can be unrolled by itself (`prepare` found no fault). `pieces` refines the steps in which several assets are watched together.
+    """The values of a contract's other readings; the contract can be unrolled by itself (`prepare` found no fault).
+    `pieces` refines the steps in which several assets are watched together; `apart` as for `prepare`.
 
     Raises NonFinitePath (of `machine.run`) where a path gives no finite number, and KeyboardInterrupt if that comes
     before there is an estimate.
     """
     leaves = MarketMap.of(market, dated)
-    unrolled = unroll_otherwise(dated, date_otherwise(dated), nodes=leaves.nodes(), makeup=leaves.makeup(),
+    unrolled = unroll_otherwise(dated, date_otherwise(dated), nodes=leaves.nodes(), makeup=leaves.makeup(apart),
                                 pieces=pieces)
     program = lower(unrolled.tape, leaves.values(unrolled.tape.leaves))
     told = progress and (lambda done, _, error: progress(done, paths, error))

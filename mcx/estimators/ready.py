@@ -39,19 +39,21 @@ class Ready:
         return lower(tape, self.market.values(tape.leaves))
 
 
-def prepare(dated: DatedContract, market: Market, apart: bool = False) -> tuple[Ready | None, tuple[Fault, ...]]:
+def prepare(
+    dated: DatedContract, market: Market, apart: bool = False, pieces: int = 1
+) -> tuple[Ready | None, tuple[Fault, ...]]:
     """The program of a contract on a market, and what the tape refuses.
 
-    Where several assets are watched together (`unrolled.bracketed`) its steps are not refined yet; `price.refined` does
-    that. `apart` where the program will be run on markets in which assets that move as one do so no more.
+    Where several assets are watched together (`unrolled.bracketed`) `price.refined` finds in how many `pieces` their
+    time must be cut. `apart` where the program will be run on markets in which assets that move as one do so no more.
     """
     market_map = MarketMap.of(market, dated)
     if faults := market_map.faults():
         return None, tuple(faults)
-    unrolled, program = made(dated, market_map, 1, apart)
+    unrolled, program = made(dated, market_map, pieces, apart)
     if program is None:
         return None, unrolled.faults
-    return Ready(dated, market_map, unrolled, program, apart=apart), ()
+    return Ready(dated, market_map, unrolled, program, pieces, apart), ()
 
 
 def made(dated: DatedContract, market: MarketMap, pieces: int, apart: bool = False) -> tuple[Unrolled, Program | None]:

@@ -11,7 +11,7 @@ from mcx.checked.payoff import Term
 from mcx.dates.dated_contract import DatedContract
 from mcx.estimators.batches import Sampling
 from mcx.estimators.estimate import Estimate
-from mcx.estimators.ready import prepare
+from mcx.estimators.ready import Ready, prepare
 from mcx.estimators.roots import Solutions, solutions
 from mcx.faults import RequestError, did_you_mean
 
@@ -43,9 +43,9 @@ def numeric_term(contract: Contract, name: str) -> Term:
     return known[name]
 
 
-def solve_term(dated: DatedContract, market: Market, name: str, target: float, sampling: Sampling) -> Solved:
-    """All values of a term that give the target, within its bounds; each value is unrolled anew."""
-    contract = dated.contract
+def solve_term(ready: Ready, market: Market, name: str, target: float, sampling: Sampling) -> Solved:
+    """All values of a term that give the target, within its bounds; each value is unrolled anew, with steps as fine."""
+    dated, contract = ready.dated, ready.dated.contract
     term = numeric_term(contract, name)
     figures = contract.terms[name]
     stated = figures.rows[0][0]
@@ -55,9 +55,9 @@ def solve_term(dated: DatedContract, market: Market, name: str, target: float, s
         return replace(dated, contract=replace(contract, terms={**contract.terms, name: _moved(term, figures, move)}))
 
     def distance(move: float, how: Sampling) -> Estimate:
-        ready, faults = prepare(at(move), market)
+        there, faults = prepare(at(move), market, ready.apart, ready.pieces)
         assert not faults, "a number does not change what can be simulated"
-        price = how.sums(replace(ready.program, outputs=ready.program.outputs[:1]))[1]
+        price = how.sums(replace(there.program, outputs=there.program.outputs[:1]))[1]
         return replace(price, value=price.value - target)
 
     found = solutions(distance, low - stated, high - stated, sampling)

@@ -34,12 +34,18 @@ def theta(ready: Ready, market: Market, sampled: Callable[[Ready], Sampling], ba
     pairs = sampling.each == 2
     if ready.dated.watches:
         nodes = ready.market.nodes()
-        ready = replace(ready, unrolled=unroll(ready.dated, nodes=sorted({*nodes, *(node + DAY for node in nodes)}),
+        ready = replace(ready, unrolled=unroll(ready.dated, nodes=sorted({*nodes, *map(_a_day_later, nodes)}),
                                                makeup=ready.market.makeup(ready.apart), pieces=ready.pieces))
         sampling = sampled(ready)
         base, _ = Revaluer.of(ready.unrolled.tape, contract, pairs=pairs).price(market, sampling)
     later = Revaluer.of(ready.unrolled.tape, contract, later=DAY, pairs=pairs)
     return later.price(_nearer(market), sampling)[0].less(base)
+
+
+def _a_day_later(time: float) -> float:
+    """Of a calendar day the time of the next one, to the last bit: else a step of no length would stand beside it."""
+    day = time / DAY
+    return (round(day) + 1) / 365.0 if abs(day - round(day)) < 1e-6 else time + DAY
 
 
 def _nearer(market: Market) -> Market:

@@ -42,8 +42,9 @@ MODEL = "model bracket"
 
 @dataclass(frozen=True, slots=True)
 class Band:
-    """A half-width, in the unit of the price, and whether it holds the gap; None where it was not stated. Of the model
-    bracket, which does not lie evenly about the price: how far it reaches towards the quote."""
+    """A half-width, in the unit of the price, and whether it holds the gap, or what is left of it where each strike at
+    its own vol is the price; None where it was not stated. Of the model bracket, which does not lie evenly about the
+    price: how far it reaches towards the quote."""
 
     name: str
     half_width: float | None
@@ -88,7 +89,8 @@ class Money:
 @dataclass(frozen=True, slots=True)
 class Verification:
     """Everything about one quote. `compared` is our price at the quote's spots, `model` the bracket about it where the
-    market states vols by strike; `gap` the quote less `compared`."""
+    market states vols by strike; `gap` the quote less `compared`; `rest` what each strike at its own vol leaves of it,
+    where that is the price and so the gap of one vol says nothing; None elsewhere."""
 
     quote: DealerQuote
     footing: Footing
@@ -107,6 +109,7 @@ class Verification:
     solved: Solved | None
     seconds: float
     model: ModelBracket | None = None
+    rest: float | None = None
 
     def left(self, reading: ReadingValue) -> Estimate:
         """The quote less the price in a reading."""
@@ -160,25 +163,29 @@ class Bench:
         meets = foot.at_reference
         gap = replace(there.price, value=meets - there.price.value)
         band = root_of_squares(there.effects) if there.effects else None
-        bands = tuple(_band(name, width, gap.value) for name, width in (
+        settled = None if there.model is None else there.model.settled
+        rest = None if settled is None else beyond(gap.value, *settled)
+        bands = tuple(_band(name, width, gap.value if rest is None else rest) for name, width in (
             (SAMPLING, gap.half_width), (BID_OFFER, foot.half_width), (INPUTS, band), (TOLERANCE, quote.tolerance)))
         if there.model is not None:
-            bands = (*bands, model_band(there.model, gap.value))
+            held = None if settled is None else any(band.holds for band in bands)
+            bands = (*bands, model_band(there.model, gap.value, held))
         far = corner(self.revaluer, there.market, there.effects, gap.value, self.sampling) if there.effects else None
         threshold = max(foot.half_width or 0.0, quote.tolerance or 0.0)
-        closing = self.closing(there, gap, meets, threshold)
+        closing = self.closing(there, gap if rest is None else replace(gap, value=rest), meets, threshold)
         solved = None
         if solve:
             wanted = foot.mid if target is None else target
-            solved = solve_term(self.ready.dated, self.market, solve, wanted, self.sampling)
+            solved = solve_term(self.ready, self.market, solve, wanted, self.sampling)
         return Verification(
             quote, foot, self.valuation, there.price, gap, bands, there.effects, there.unstated, far,
             tuple(there.implied(lever, meets) for lever in there.levers if lever.kind not in NOT_MOVED),
             there.joint(meets), there.readings, closing, self._money(quote), solved, time.perf_counter() - begun,
-            there.model)
+            there.model, rest)
 
     def closing(self, there: Compared, gap: Estimate, meets: float, threshold: float) -> tuple[str, ...]:
-        """The readings in which an open gap would not be there; up to `threshold` nobody calls it one."""
+        """The readings in which an open gap (or what is left of it) would not be there; up to `threshold` nobody calls
+        it one."""
         return tuple(each.name for each in there.readings.readings
                      if each.differs and _closes(gap, replace(each.price, value=meets - each.price.value), threshold))
 
@@ -218,9 +225,9 @@ class Compared:
 
     @cached_property
     def readings(self) -> ReadingsValuation:
-        sampling, refinement = self.bench.sampling, self.bench.valuation.refinement
-        found = value_readings(self.bench.ready.dated, self.market, paths=sampling.paths, seed=sampling.seed,
-                               pieces=refinement.pieces if refinement else 1, threads=sampling.threads,
+        sampling, ready = self.bench.sampling, self.bench.ready
+        found = value_readings(ready.dated, self.market, paths=sampling.paths, seed=sampling.seed,
+                               pieces=ready.pieces, apart=ready.apart, threads=sampling.threads,
                                notice=sampling.notice)
         if found.interrupted:
             raise KeyboardInterrupt
@@ -275,13 +282,19 @@ def _band(name: str, half_width: float | None, gap: float) -> Band:
     return Band(name, half_width, None if half_width is None else abs(gap) <= half_width)
 
 
-def model_band(model: ModelBracket, gap: float) -> Band:
+def model_band(model: ModelBracket, gap: float, held: bool | None = None) -> Band:
     """How far the model bracket reaches from the headline price towards a quote, and whether the quote is inside it: it
-    may lie beside the headline price altogether."""
+    may lie beside the headline price altogether. Where the strip is the price the other ends are known to be wrong: it
+    is a correction then, and holds the gap if anything stated has `held` what it leaves."""
     if not model.changes:
         return Band(MODEL, None, None)
-    low, high = model.low.value, model.high.value
-    return Band(MODEL, max(high if gap >= 0.0 else -low, 0.0), low <= gap <= high)
+    low, high = model.settled or (model.low.value, model.high.value)
+    return Band(MODEL, max(high if gap >= 0.0 else -low, 0.0), low <= gap <= high if held is None else held)
+
+
+def beyond(gap: float, low: float, high: float) -> float:
+    """What a price anywhere between two leaves of a gap at best."""
+    return gap - min(max(gap, low), high)
 
 
 def _closes(gap: Estimate, left: Estimate, threshold: float) -> bool:

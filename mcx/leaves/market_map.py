@@ -128,10 +128,11 @@ class MarketMap:
 
     def _as_one(self, one: int, other: int) -> bool:
         """Whether two assets are perfectly correlated and have the same growth and vols throughout; what cash dividends
-        take from the spot moves otherwise than the rest, so with these two assets differ."""
+        take from the spot moves otherwise than the rest, so with these two assets differ, and so they do with vols by
+        strike, of which the model bracket gives each its own."""
         numbers = {meets.number if meets else None for meets in (self._exchanges[one], self._exchanges[other])}
         if (self._correlation[one, other] != 1.0 or len(numbers) > 1
-                or any(pays_cash(self.quotes[asset]) for asset in (one, other))):
+                or any(pays_cash(self.quotes[asset]) or self.quotes[asset].by_strike for asset in (one, other))):
             return False
         times = np.array([*(nodes := self.nodes()), *(node + SOON for node in nodes), 1.0 + max(nodes, default=0.0)])
         moves = ([self._growth(asset, times), self._variance(asset, -1, np.zeros_like(times), times)]

@@ -10,6 +10,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass, replace
+from functools import cache
 
 from scipy.special import ndtr
 
@@ -67,18 +68,22 @@ class LevelLaw:
         return float(ndtr(-d2)) + by_vol
 
 
-def law(market: Market, contract: Contract, here: MarketMap, name: str, time: float, smile: bool) -> LevelLaw:
-    """The law of an asset's level by its vols by strike or, without `smile`, by the one vol that prices the contract.
-    `here` is the map of the market, whose forward serves every strike, also at a fixed rate of exchange."""
-    last = here.last
+def laws(market: Market, contract: Contract, here: MarketMap, name: str, smile: bool) -> Callable[[float], LevelLaw]:
+    """The law of an asset's level at each time by its vols by strike or, without `smile`, by the one vol that prices
+    the contract. `here` is the map of the market, whose forward serves every strike, also at a fixed rate of exchange.
+    """
+    last, number = here.last, contract.assets.index(name)
 
-    def variance(strike: float) -> float:
-        there = MarketMap(at_strikes(market, contract, {name: strike}), contract, last) if smile else here
-        return there.vol_to(name, time) ** 2 * time
+    @cache
+    def at(strike: float) -> MarketMap:
+        return MarketMap(at_strikes(market, contract, {name: strike}), contract, last)
 
-    number = contract.assets.index(name)
-    certain = float(here.escrowed(number, time, last)) if last is not None else 0.0
-    return LevelLaw(here.forward(name, time), certain, variance)
+    def law(time: float) -> LevelLaw:
+        certain = float(here.escrowed(number, time, last)) if last is not None else 0.0
+        return LevelLaw(here.forward(name, time), certain,
+                        lambda strike: (at(strike) if smile else here).vol_to(name, time) ** 2 * time)
+
+    return law
 
 
 def butterflies(market: Market, contract: Contract, here: MarketMap) -> Iterator[str]:
@@ -88,11 +93,12 @@ def butterflies(market: Market, contract: Contract, here: MarketMap) -> Iterator
         asset = market.assets[name]
         vols = asset.by_strike
         times = {} if vols is None else {node.label: node.time or FLAT_TIME for node in vols.curves[0].nodes}
+        law = laws(market, contract, here, name, smile=True)
         unit = here.forward(name, 0.0) / asset.spot.value
         for label, time in times.items():
             if here.last is not None and time > here.last:
                 continue
-            found = law(market, contract, here, name, time, smile=True)
+            found = law(time)
             strikes = [(one * asset.spot.value if vols.relative else one) * unit for one in vols.strikes]
             puts = [found.put(strike) for strike in strikes]
             slopes = [(puts[k + 1] - puts[k]) / (strikes[k + 1] - strikes[k]) for k in range(len(puts) - 1)]

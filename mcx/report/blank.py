@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Sequence
 from itertools import combinations
 
+from mcx.checked.curves import STRIKES_WRITTEN
 from mcx.checked.dealer_quote import OF_NOTIONAL, OF_UNITS
 from mcx.checked.payoff import MONEY, MULTIPLES, Deliver, Payoff, Term
 from mcx.checked.read_contract import uses_period
@@ -104,7 +105,8 @@ def _market(assets: Sequence[str]) -> Iterator[str]:
         yield _line("currency", about="as EUR", indent=4)
         yield _line("yield", about="as 2.4% or {1y: 2.4%, 3y: 2.2%}; or 'dividends', 'forwards', 'underlying: total "
                                    "return'", indent=4)
-        yield _line("vol", about="as 18% or {3m: 17%, 1y: 18%, 3y: 19%}", indent=4)
+        yield _line("vol", about="as 18% or {3m: 17%, 1y: 18%, 3y: 19%}; by strike, for the model bracket: "
+                                 f"{STRIKES_WRITTEN[1:-1]}", indent=4)
     if len(assets) > 1:
         yield "correlation:"
         for first, second in combinations(assets, 2):

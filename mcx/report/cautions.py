@@ -111,7 +111,8 @@ def assumptions(dated: DatedContract, market: Market, market_map: MarketMap) -> 
 def _by_strike(name: str, vols: StrikeVols) -> str:
     low, high, own = (shown_strike(vols, strike) for strike in (vols.strikes[0], vols.strikes[-1], vols.priced_at))
     moves = "a strike in percent goes along where a spot moves" if vols.relative else "strikes stay where a spot moves"
-    return (f"the price takes the vols of {name} at {own}, as its market says; vols are linear in strike between the "
+    return (f"the price takes the vols of {name} at {own}, as its market says, and so do sensitivities, ladders, "
+            f"implied inputs, the input band and other readings; vols are linear in strike between the "
             f"strikes given, flat below {low} and above {high}; the headline's vol stays as it is and {moves}")
 
 

@@ -51,9 +51,11 @@ class ModelBracketResult(Result):
                   refers to none. The standard errors are those of their differences from the headline price
     headline      the strike whose vols the headline price uses, for each asset, with its vol to the last observation
     strikes       the price at each level
-    strip         the price with each payment of one level at the vols of its own strikes, with the slopes of vol below
-                  and above strikes where vols are quoted; empty where there is no such payment
-    exact         whether these are all payments that differ: then `strip` needs no model
+    strip         the price with each payment of one level at the vols of its own strikes: the lowest and the highest by
+                  the slopes of vol below and above each strike (where vols are quoted these differ); empty where there
+                  is no such payment
+    exact         whether these are all payments that differ, of levels in the contract's currency: then `strip` needs
+                  no model
     indicative    why the bracket is only indicative; empty where it is not
     paths         of the differences
     """
@@ -77,6 +79,10 @@ EARLY_END = ("whether it ends early hangs on the skew at dates to come, the more
              "strike of today do not say that")
 ON_THE_WAY = "it looks at levels on the way, and vols by strike say nothing of how levels of two dates go together"
 TOGETHER = "how several assets move together under skew is not said by the vols of each"
+SEVERAL = ("where it buys one level and sells another the price may lie beyond that of every single vol, and so "
+           "outside the bracket")
+CONVERTED = ("how {names} under skew with a rate of exchange is not said by vols by strike: each strike at its own "
+             "vol keeps the {kept} of the headline")
 NO_WIDTH = "every level has the vol of the headline: the bracket has no width, and that is no certainty"
 NO_LEVEL = "the price refers to no level that has a vol of its own; the skew may matter to it all the same"
 
@@ -129,6 +135,9 @@ def _indicative(found: ModelBracket, ready: Ready) -> Iterator[str]:
         return
     steps = ready.unrolled.observed.instructions
     read = [step for step in steps if step.op in (Op.LEVEL, Op.LOW, Op.HIGH)]
+    if len({one.levels for one in found.strikes}) > 1:
+        yield SEVERAL
+    yield from _converted(ready)
     if any(output.kind == "end" for output in ready.unrolled.observed.outputs):
         yield EARLY_END
     elif len({step.payload.time for step in read}) > 1 or any(step.op is not Op.LEVEL for step in read):
@@ -137,6 +146,16 @@ def _indicative(found: ModelBracket, ready: Ready) -> Iterator[str]:
         yield NO_WIDTH
     if len({step.payload.asset for step in read}) > 1:
         yield TOGETHER
+
+
+def _converted(ready: Ready) -> Iterator[str]:
+    """Assets in another currency than the contract's, whose vols by strike are of their own."""
+    contract, assets = ready.dated.contract, ready.market.market.assets
+    for how, kept in (("quanto", "forward"), ("composite", "vol of the rate and correlation with it")):
+        names = [name for name in contract.assets if contract.conversion.get(name) == how and assets[name].by_strike]
+        if names:
+            goes = "goes" if len(names) == 1 else "go"
+            yield CONVERTED.format(names=f"{' and '.join(names)} {goes}", kept=kept)
 
 
 def _flat(market: Market) -> bool:

@@ -35,8 +35,10 @@ def show_model(found: ModelBracketResult, scale: Scale, standard_error: float, p
     if found.strikes:
         page.line(f"  errors are those of the difference from the headline price, on the same {found.paths:,} paths")
     if found.exact:
+        beyond = any(each.beyond for one in found.strikes for each in one.assets)
         page.line("  every payment depends on one level of one date: at the vols of its own strikes the price needs no "
-                  "model of levels, only the vols between the strikes that are quoted")
+                  "model of levels, only the vols between the strikes that are quoted"
+                  f"{', and beyond them, where they are taken as flat' if beyond else ''}")
     if found.indicative:
         page.line("  indicative only:")
         page.items(found.indicative)
@@ -50,17 +52,18 @@ def model_rows(found: ModelBracketResult, scale: Scale, standard_error: float) -
         yield _level(one), vols, scale.show(one.price, places), scale.show(one.difference_standard_error, places)
         for side, price, error in _sides(one.skewed, one.skewed_standard_errors, scale, places):
             yield f"  its jump with the slope of vol{side}", "", price, error
-    for side, price, _ in _sides(found.strip, (0.0,) * len(found.strip), scale, places):
-        yield f"each strike its own, with the slopes of vol{side}", "", price, ""
+    for end, price, _ in _sides(found.strip, (0.0,) * len(found.strip), scale, places, (", lowest", ", highest")):
+        yield f"each strike its own, with the slopes of vol{end}", "", price, ""
 
 
-def _sides(prices: Sequence[float], errors: Sequence[float], scale: Scale, places: int) -> list[tuple[str, str, str]]:
+def _sides(prices: Sequence[float], errors: Sequence[float], scale: Scale, places: int,
+           names: tuple[str, str] = (" below", " above")) -> list[tuple[str, str, str]]:
     """A price with the slope of vol on each side of a strike; once where both are the same within the error."""
     shown = [(scale.show(price, places), scale.show(error, places))
              for price, error in zip(prices, errors, strict=True)]
     if shown and (shown[0][0] == shown[-1][0] or abs(prices[0] - prices[-1]) <= errors[0]):
         return [("", *shown[0])]
-    return [(side, *each) for side, each in zip((" below", " above"), shown, strict=True)] if shown else []
+    return [(side, *each) for side, each in zip(names, shown, strict=True)] if shown else []
 
 
 def _level(one: StrikePrice) -> str:

@@ -220,6 +220,7 @@ def _said(node: Node) -> str:
         case Mapping() if "value" in node:
             rest = [f"{key} {value}".replace("_", " ") for key, value in node.entries if key.text != "value"]
             return f"{node.get('value')} ({', '.join(rest)})" if rest else str(node.get("value"))
-        case Mapping():
-            return ", ".join(f"{key} {_said(value)}" for key, value in node.entries)
+        case Mapping():  # a curve within a curve, as a vol by strike, in brackets
+            return ", ".join(f"{key} ({_said(value)})" if isinstance(value, Mapping) and "value" not in value
+                             else f"{key} {_said(value)}" for key, value in node.entries)
     return "; ".join(_said(item) for item in node)

@@ -47,12 +47,14 @@ class FootingLine(Result):
 
 @dataclass(frozen=True, slots=True)
 class Gap(Result):
-    """The quote on our footing less our price; `z` in standard errors."""
+    """The quote on our footing less our price; `z` in standard errors. `rest`: what each strike at its own vol leaves
+    of `price` where that needs no model (with the same standard error), held against the bands; None elsewhere."""
 
     price: float
     standard_error: float
     z: float | None
     value: float
+    rest: float | None
 
 
 @dataclass(frozen=True, slots=True)
@@ -219,8 +221,8 @@ class VerifyResult(Result):
 
     `price` is our price at our spots, `compared` that at the spots of the quote; `mid`, `bid` and `ask` are the quote
     on our footing. `model_bracket` (a `ModelBracketResult`, about `compared`) is None but where the market has vols by
-    strike. `explained`: some band holds the gap. `leads` say what closes it: readings, and
-    single inputs inside their stated uncertainty. `solve` and `target` repeat the request.
+    strike. `explained`: some band holds the gap, or what is left of it (`gap.rest`). `leads` say what closes it:
+    readings, and single inputs inside their stated uncertainty. `solve` and `target` repeat the request.
     """
 
     contract: str

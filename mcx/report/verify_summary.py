@@ -74,10 +74,10 @@ def verify_result(ready: Ready, market: Market, found: Verification, solve: str,
         standard_error=price.standard_error,
         compared=compared.value,
         compared_standard_error=compared.standard_error,
-        gap=Gap(gap.value, gap.standard_error, z if math.isfinite(z) else None, gap.value * contract.size),
+        gap=Gap(gap.value, gap.standard_error, z if math.isfinite(z) else None, gap.value * contract.size, found.rest),
         bands=tuple(BandLine(band.name, band.half_width, band.holds) for band in found.bands),
         model_bracket=_model(found, ready, market),
-        verdict=verdict(found.bands, gap.value, contract.currency if not percent else ""),
+        verdict=verdict(found.bands, gap.value, contract.currency if not percent else "", found.rest),
         leads=tuple(_leads(found, contract.currency if not percent else "")),
         explained=any(band.holds for band in found.bands),
         inputs=tuple(InputEffect(each.lever.name, each.lever.subject, min(filter(None, each.lever.widths)),
@@ -114,14 +114,21 @@ CONVENTIONS = (
 )
 
 
-def verdict(bands: Sequence[Band], gap: float, currency: str) -> str:
-    """One sentence: which bands hold the gap, which do not, or that none does."""
+def verdict(bands: Sequence[Band], gap: float, currency: str, rest: float | None = None) -> str:
+    """One sentence: which bands hold the gap, which do not, or that none does; likewise of the `rest` of it where each
+    strike at its own vol is the price."""
     size = _size(gap, currency)
-    inside = [HELD_BY[band.name] for band in bands if band.holds]
-    outside = [HELD_BY[band.name] for band in bands if band.holds is False]
+    judged = [band for band in bands if rest is None or band.name != MODEL]  # whose strip is taken off already
+    inside = [HELD_BY[band.name] for band in judged if band.holds]
+    outside = [HELD_BY[band.name] for band in judged if band.holds is False]
+    taken = f"With each strike at its own vol {_size(rest or 0.0, currency)} of the gap of {size}"
+    if rest is not None and not inside:
+        return f"{taken} is left, and nothing that was stated holds it: it is outside {_joined(outside, 'and')}."
     if not inside:
         return f"Nothing that was stated holds the gap of {size}: it is outside {_joined(outside, 'and')}."
     tail = f", outside {_joined(outside, 'and')}" if outside else ""
+    if rest is not None:
+        return f"{taken} is left; it is inside {_joined(inside, 'and')}{tail}."
     return f"The gap of {size} is inside {_joined(inside, 'and')}{tail}."
 
 
@@ -139,15 +146,14 @@ def _model(found: Verification, ready: Ready, market: Market) -> ModelBracketRes
 
 def _leads(found: Verification, currency: str) -> Iterator[str]:
     """What closes the gap by itself; `currency` '' where prices are in percent."""
-    if [band.name for band in found.bands if band.holds] == [MODEL]:
-        may = ("so far the vols of its own levels take a price with one vol" if found.model.exact else
-               "a dealer who prices the skew may be there")
-        yield f"Explained by the model bracket alone: {may}; one vol for each tenor cannot say whether that is right."
-    if found.model is not None and found.model.exact:
-        left = sorted(found.gap.value - change for change in found.model.strip)
-        nearest = min(left, key=abs)
-        yield (f"With each strike at its own vol the contract needs no model of levels; of the gap that leaves "
-               f"{_size(nearest, currency)}.")
+    if found.rest is not None:
+        low, high = found.model.settled
+        sizes = dict.fromkeys(_size(end, currency) for end in (low, high))
+        yield (f"With each strike at its own vol the contract needs no model of levels: that adds {' to '.join(sizes)} "
+               f"to our price. What is implied or read otherwise below is by the headline's vol.")
+    elif [band.name for band in found.bands if band.holds] == [MODEL]:
+        yield ("Explained by the model bracket alone: a dealer who prices the skew may be there; one vol for each "
+               "tenor cannot say whether that is right.")
     if found.closing:
         yield f"Read otherwise it would be closed: {_joined(found.closing, 'or')}."
     elif found.readings.readings:

@@ -10,6 +10,7 @@ from mcx.report.terminal import Page, decimals, fixed
 from mcx.report.verify_results import (
     NO_EFFECT,
     NONE_THERE,
+    Gap,
     ImpliedInput,
     Ranked,
     SolvedTerm,
@@ -55,18 +56,21 @@ def show_verification(result: VerifyResult, page: Page) -> None:
         ("gap", f"{scale.show(gap.price, places)} {scale.unit}, standard error "
                 f"{scale.show(gap.standard_error, places)}, {fixed(gap.value, 2)} {result.currency} (quote less our "
                 f"price)"),
+        *rest_row(gap, scale, places),
         ("paths", f"{result.paths:,}, the page in {result.seconds:.1f} s; seed {result.seed}"),
     ))
     page.heading("the quote on our footing")
     page.table(("step", "", "quote"), (
         (line.step, line.text, footed(line.quote, line.standard_error, scale, result, number))
         for number, line in enumerate(result.footing)), words=2)
-    page.heading("what may hold the gap, each by itself")
+    page.heading(f"what may hold {'the gap' if gap.rest is None else 'what is left of the gap'}, each by itself")
     page.table(("", "half-width", "holds it"), (
         (band.name, "not stated" if band.half_width is None else scale.show(band.half_width, places),
          ANSWERS[band.holds]) for band in result.bands), last=1)
-    if gap.z is not None:
+    if gap.z is not None and gap.rest is None:
         page.line(f"  sampling error: the gap is z = {gap.z:+.1f} standard errors")
+    elif gap.rest is not None and gap.standard_error > 0.0:
+        page.line(f"  sampling error: what is left is z = {gap.rest / gap.standard_error:+.1f} standard errors")
     if result.worst_corner is not None:
         page.line(f"  {corner(result.worst_corner, scale, places)}")
     if result.model_bracket:
@@ -91,6 +95,13 @@ def show_verification(result: VerifyResult, page: Page) -> None:
         if texts:
             page.heading(title)
             page.items(texts)
+
+
+def rest_row(gap: Gap, scale: Scale, places: int) -> Iterator[tuple[str, str]]:
+    """What each strike at its own vol leaves of the gap, where that is the price."""
+    if gap.rest is not None:
+        yield "left of it", (f"{scale.show(gap.rest, places)} {scale.unit}, with each strike at its own vol, which "
+                             "needs no model of levels")
 
 
 def rank_rows(ranking: Iterable[Ranked], scale: Scale) -> Iterator[tuple[str, ...]]:

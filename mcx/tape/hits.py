@@ -100,6 +100,7 @@ class Hits:
         self._waiting = [stretch for hit in dated.hits for stretch in self._stretches(hit, cuts)]
         self._waiting.sort(key=lambda stretch: (stretch.end, stretch.start < stretch.end))
         self._turns: dict[tuple[str, float], tuple[int, int]] = {}
+        self.moments: dict[int, str] = {}  # values of the tape, and for the flag of which watch they are drawn
         self._levels = _Levels(formulas)
 
     def _stretches(self, hit: DatedHit, cuts: Sequence[float]) -> Iterator[Stretch]:
@@ -128,6 +129,11 @@ class Hits:
             self._turns[key] = before, state.at(stretch.end)[0]
         return self._turns[key]
 
+    @property
+    def flags(self) -> dict[int, str]:
+        """The values of the tape that are flags of watches, before a stretch or at its end."""
+        return {flag: name for (name, _), pair in self._turns.items() for flag in pair}
+
     def scene(self, stretch: Stretch, flag: int) -> Scene:
         """What a formula may read at the moment at which a flag turns in a stretch."""
         assets = range(len(self.dated.contract.assets))
@@ -136,6 +142,7 @@ class Hits:
         asset, level = self._barrier(stretch, flag)
         key = LevelKey(asset, stretch.end, stretch.start)
         part = self.builder.keyed(Op.MOMENT, (level,), key, stretch.hit.event.place)
+        self.moments[part] = stretch.hit.watch.running.name
         level = self.observations.scaled(asset, level)
 
         def spot(name: Name) -> Values:

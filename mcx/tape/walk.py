@@ -20,6 +20,7 @@ from mcx.tape.builder import Builder
 from mcx.tape.formulas import Formulas, Lacking, Scene, Unreadable, Values
 from mcx.tape.hits import Due, Hits, Span, Stretch, which_first
 from mcx.tape.ledger import Ledger, Payment
+from mcx.tape.moments import moments_without_law
 from mcx.tape.observations import Observations
 from mcx.tape.ops import Op
 from mcx.tape.program import Leaf, LeafKind
@@ -96,6 +97,9 @@ class Walk:
             if moment.day.time <= 0.0:
                 self._note_state(moment.day)
         self._hit_until(math.inf)
+        if self.hits.moments and not self.faults:
+            outputs = (output.value for output in self.ledger.outputs())
+            self.faults += moments_without_law(self.builder.instructions, outputs, self.hits.flags, self.hits.moments)
 
     def _note(self, trouble: Unreadable) -> None:
         """A fault, unless fixings that are missing say it."""

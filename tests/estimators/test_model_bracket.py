@@ -4,6 +4,7 @@ package's strips."""
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import replace
 from functools import cache
 from math import exp, log, sqrt
 
@@ -15,9 +16,11 @@ from scipy.stats import norm
 
 from mcx.dates.dating import date_on
 from mcx.estimators.batches import Sampling
-from mcx.estimators.model_bracket import ModelBracket, model_bracket
+from mcx.estimators.estimate import Estimate
+from mcx.estimators.model_bracket import AtStrike, ModelBracket, model_bracket
 from mcx.estimators.ready import Ready, prepare
 from mcx.estimators.revalue import Revaluer
+from mcx.estimators.verify import Band, beyond, model_band
 from mcx.leaves.jacobian import inputs, moved
 from mcx.leaves.smile import at_strikes, butterflies
 
@@ -218,6 +221,82 @@ def test_where_vols_are_quoted_a_digital_has_two_slopes():
     assert found.strikes[0].skewed[0].value < found.strikes[0].skewed[1].value
 
 
+PAYMENT = """payoff: payment
+about: One formula of the level at the end, and one of it half-way.
+terms:
+  half: {type: date}
+  end: {type: date}
+events:
+  - at: half
+    pay: %s
+  - at: end
+    pay: %s
+---
+"""
+SHAPES = {
+    "airbag": ("min(spot / 80, 1) if spot < 100 else (1 + 0.9 * (spot / 100 - 1))",
+               lambda at: np.where(at < 100, np.minimum(at / 80, 1), 1 + 0.9 * (at / 100 - 1))),
+    "twin win": ("abs(spot / 100 - 1) if spot > 65 else (spot / 100 - 1)",
+                 lambda at: np.where(at > 65, np.abs(at / 100 - 1), at / 100 - 1)),
+    "bonus": ("max(spot / 100, 1.12) if spot > 75 else (spot / 100)",
+              lambda at: np.where(at > 75, np.maximum(at / 100, 1.12), at / 100)),
+    "range": ("1 if spot >= 82 and spot <= 117 else 0", lambda at: 1.0 * ((at >= 82) & (at <= 117))),
+    "beyond the strikes given": ("max(45 - spot, 0) + (1 if spot > 140 else 0)",
+                                 lambda at: np.maximum(45 - at, 0) + 1.0 * (at > 140)),
+}
+
+
+def payment(end: str, half: str = "0") -> str:
+    return PAYMENT % (half, end) + contract("payment", "half: 6m, end: 1y", size="units: 1")
+
+
+@pytest.mark.parametrize("shape", SHAPES)
+def test_the_strip_of_any_broken_line(shape):
+    """Lines that jump and turn, up and down, also where vols are flat beyond the strikes given."""
+    vols = SMILES["smile"]
+    formula, function = SHAPES[shape]
+    found, _ = bracket_of(payment(formula) + market(by_strike(vols)), paths=4096)
+    truth = exact(function, vols) - exact(function, 19.5)
+    assert found.exact
+    assert found.strip == pytest.approx((truth, truth), abs=5e-6)
+
+
+def test_a_range_between_two_strikes_given():
+    """Each end has its two slopes of vol, and these need not be taken on the same side."""
+    vols = SMILES["smile"]
+    found, _ = bracket_of(payment("1 if spot >= 90 and spot <= 110 else 0") + market(by_strike(vols)), paths=4096)
+
+    def chance(level: float, step: float) -> float:
+        here, there = (float(put(np.array(at), np.interp(at, STRIKES, np.array(vols) / 100)))
+                       for at in (level, level + step))
+        return (there - here) / step
+
+    ends = [DISCOUNT * (chance(110.0, up) - chance(90.0, down)) for up in (-1e-4, 1e-4) for down in (-1e-4, 1e-4)]
+    headline = exact(lambda at: 1.0 * ((at >= 90) & (at <= 110)), 19.5)
+    assert found.strip == pytest.approx((min(ends) - headline, max(ends) - headline), abs=4e-6)
+    assert found.exact
+    assert found.low.value <= found.strip[0] < found.strip[1] <= found.high.value
+
+
+@pytest.mark.parametrize(("end", "half"), [
+    ("1 if spot < 93 else 0", "log(spot / 100)"),  # a curve without a break
+    ("1 if spot < 93 else 0", "(spot / 100) ** 2"),
+    ("(((spot - 100) / 10) ** 3) if spot > 90 and spot < 110 else 0", "0"),  # as its chord at both ends and half-way
+])
+def test_a_curve_is_no_strip(end, half):
+    """Puts and digitals do not add up to it, so the price needs more than their vols."""
+    assert not bracket_of(payment(end, half) + market(by_strike(SMILES["smile"])), paths=4096)[0].exact
+
+
+def test_a_line_without_a_break_beside_a_strip():
+    """It is worth its forward whatever the vols."""
+    vols = by_strike(SMILES["smile"])
+    one, other = (bracket_of(payment("1 if spot < 93 else 0", half) + market(vols), paths=4096)[0]
+                  for half in ("0", "spot / 50 - 1"))
+    assert one.exact and other.exact
+    assert one.strip == other.strip
+
+
 def test_a_term_structure_of_strikes():
     """Between two tenors total variance at each strike is linear in time."""
     vols = "{strikes: {80%: {3m: 34%, 2y: 28%}, 110%: {3m: 19%, 2y: 21%}}, priced_at: spot}"
@@ -332,9 +411,45 @@ def test_cash_dividends_and_fixed_rates_of_exchange(more):
 
     truth = price(0.25) - price(0.22)
     assert bracket.strip == pytest.approx((truth, truth), abs=1e-9)
+    assert bracket.exact == ("quanto" not in more)  # how the level goes with the rate under skew is not said
     (one,) = bracket.strikes
     slack = 0.03 * truth if "quanto" in more else 0.0  # its drift hangs on the vol as well
     assert abs(one.change.value - truth) < 4.0 * one.change.standard_error + slack
+
+
+def test_a_cash_dividend_between_two_observations():
+    """What of the level half-way is the dividend still to come is certain; the vol of the strike is that of the rest."""
+    text = payment("spot / 100", "max(85 - spot, 0) + (10 if spot < 85 else 0)")
+    quoted = market(by_strike(SMILES["linear skew"])).replace("yield: 2.0%", "dividends: [{ex: 0.75y, cash: 8}]")
+    found, _ = bracket_of(text + quoted, paths=4096)
+    certain = 8.0 * exp(-RATE * 0.25)
+    forward = SPOT * exp(RATE * 0.5) - certain
+
+    def price(strike: float, vol: float) -> float:
+        deviation = vol * sqrt(0.5)
+        left = strike - certain
+        d1 = log(forward / left) / deviation + deviation / 2
+        return exp(-RATE * 0.5) * (left * norm.cdf(deviation - d1) - forward * norm.cdf(-d1))
+
+    def worth(vol_at: Callable[[float], float]) -> float:
+        below = (price(85.01, vol_at(85.01)) - price(84.99, vol_at(84.99))) / 0.02
+        return price(85.0, vol_at(85.0)) + 10.0 * below
+
+    truth = worth(lambda at: 0.42 - 0.002 * at) - worth(lambda at: 0.22)
+    assert found.strip == pytest.approx((truth, truth), abs=2e-5)
+
+
+@pytest.mark.parametrize(("gap", "rest", "reach"), [
+    (4.0, 2.0, 2.0), (1.5, 0.0, 2.0), (0.25, -0.75, 2.0), (-1.0, -2.0, 0.0)])
+def test_what_a_price_between_two_slopes_leaves_of_a_gap(gap, rest, reach):
+    """The strip from +1 to +2 about the headline; the price at the vol of one level, +3, is known to be wrong."""
+    away = AtStrike((("harbour", 80.0),), (("harbour", 0.3),), False, Estimate(3.0, 0.1, 64), ())
+    exactly = ModelBracket((away,), (1.0, 2.0), True, (), 64)
+    assert beyond(gap, *exactly.settled) == rest
+    for held in (True, False):
+        assert model_band(exactly, gap, held) == Band("model bracket", reach, held)
+    assert model_band(replace(exactly, exact=False), gap) == Band("model bracket", 3.0 if gap > 0.0 else 0.0,
+                                                                  1.0 <= gap <= 3.0)
 
 
 def test_a_rate_of_exchange_of_the_day():
@@ -356,6 +471,7 @@ def test_a_rate_of_exchange_of_the_day():
 
     truth = price(0.25) - price(0.22)  # 76.5 is 85 at 0.9
     assert bracket.strip == pytest.approx((truth, truth), abs=1e-9)
+    assert not bracket.exact
     (one,) = bracket.strikes
     assert abs(one.change.value - truth) < 4.0 * one.change.standard_error
 

@@ -15,6 +15,9 @@ from jsonschema import Draft7Validator
 
 import front_door
 import mcx
+from test_blank import assets_for, filled
+from test_wrong_input import SLIPS as TOLD
+from test_wrong_input import slipped
 from mcx.checked.library import shipped_names, shipped_text
 from mcx.checked.load import checked_request
 from mcx.faults import Place
@@ -80,6 +83,27 @@ def test_corners_are_right():
     """The contracts, markets and definitions that the tests use for the grammar's corners."""
     for file in sorted((Path(__file__).parents[1] / "corners").glob("*.yaml")):
         assert not complaints(file.read_text(encoding="utf-8")), file.name
+
+
+@pytest.mark.parametrize("name", shipped_names())
+@pytest.mark.parametrize("with_optional", [False, True])
+def test_blanks_are_right_once_filled_in(name: str, with_optional: bool):
+    """By the schema of all and by that of the definition; an empty blank is marked at what stands empty."""
+    text = filled(name, with_optional)
+    assert not complaints(text) and not complaints(text, name)
+    assert complaints(mcx.blank(name, ("alder", "birch", "cedar")[:len(assets_for(name))]), name)
+
+
+SHAPELY = {  # of the slips that `mcx price` tells, those of shape: keys, words and units, wherever terms are not one's own
+    "unknown key", "missing key", "key of a later version", "negative spot", "negative vol", "not finite"}
+NO_YAML = {"cut at a comma", "repeated key", "repeated term"}  # no document at all, which an editor says by itself
+
+
+def test_slips_of_shape_are_marked():
+    """Of every slip that the loader is tested with, those of shape are marked and no other: names, formulas, dates, terms
+    of a definition of one's own and how numbers fit together are for the loader."""
+    marked = {slip for slip in TOLD if slip not in NO_YAML and complaints(slipped(slip))}
+    assert marked == SHAPELY and NO_YAML < TOLD.keys()
 
 
 # Shapes broken one by one: each mapping loses a key or gets one more, each value becomes one of another shape. What the

@@ -70,12 +70,16 @@ def compare(case: Case, seconds: float | None, paths: int | None) -> tuple[list[
         except Refusal as reason:
             refused.append((",".join(names), str(reason).partition(", since ")[2]))
             continue
-        found.append(_run(case, scheme, plain, seconds, paths))
+        sampler = Sampler(scheme, case.seed, case.threads, case.notice)
+        if paths is not None and paths < sampler.fewest:
+            refused.append((",".join(names), f"it takes {sampler.fewest:,} paths or more, and {paths:,} were asked for"))
+            continue
+        found.append(_run(sampler, plain, seconds, paths))
     return found, refused
 
 
-def _run(case: Case, scheme: Scheme, plain: Sampler, seconds: float | None, paths: int | None) -> Compared:
-    sampler = Sampler(scheme, case.seed, case.threads, case.notice)
+def _run(sampler: Sampler, plain: Sampler, seconds: float | None, paths: int | None) -> Compared:
+    scheme = sampler.scheme
     if paths is None:
         paths = sampler.within_time(_paths_for(sampler, seconds))
     sizes = sorted({sampler.paths(max(paths // share, FIRST_PILOT // 4)) for share in SHORTER} | {sampler.paths(paths)})

@@ -45,13 +45,17 @@ class Sampler:
             return scheme.each * net_for(number, scheme.plan.scrambles).paths
         return scheme.each * scheme.batch * max(-(-number // scheme.batch), FEWEST_PATHS)
 
+    @property
+    def fewest(self) -> int:
+        """The fewest paths of the contract that can be asked for: points cannot be made more in silence."""
+        return self.scheme.each * self.scheme.plan.scrambles * FEWEST_POINTS if self.scheme.plan.scrambles else 1
+
     def within_time(self, wanted: int) -> int:
         """The same where a time is to be kept: the next smaller number of points."""
         if not self.scheme.plan.scrambles:
             return self.paths(wanted)
-        fewest = self.scheme.each * self.scheme.plan.scrambles * FEWEST_POINTS
-        found = self.paths(max(wanted, fewest))
-        return found // 2 if found > max(wanted, fewest) else found
+        found = self.paths(max(wanted, self.fewest))
+        return found // 2 if found > max(wanted, self.fewest) else found
 
     def sample(self, wanted: int, *, stream: int = Stream.MAIN, first_output_only: bool = False,
                progress: Progress | None = None) -> Sampled:

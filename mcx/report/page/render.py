@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Sequence
 from importlib import resources
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 from mcx.faults import RequestError
 from mcx.report.greek_results import GreeksResult, GreeksTable
@@ -19,8 +21,12 @@ from mcx.report.results import PriceResult, PriceTable, Result
 from mcx.report.scene import Scene
 from mcx.report.verify_results import VerifyResult, VerifyTable
 
+if TYPE_CHECKING:
+    from markupsafe import Markup
+
 FOOTER = ("An estimate on the inputs shown and the user's reading of the terms, to be reviewed by a licensed "
           "professional under local rules; not advice and not an offer.")
+DATE = re.compile("[0-9]{4}-[0-9]{2}-[0-9]{2}")
 SHEETS = {PriceResult: price_sheet, GreeksResult: greeks_sheet, VerifyResult: verify_sheet,
           MethodsResult: methods_sheet}
 ROWS = {PriceTable: "prices", GreeksTable: "contracts", VerifyTable: "quotes", MethodsTable: "contracts"}
@@ -73,9 +79,12 @@ def _render(title: str, sheets: Sequence[Sheet], whole: bool) -> str:
     return template.render(title=title, sheets=sheets, whole=whole, style=style, footer=FOOTER)
 
 
-def _joined(text: str) -> str:
-    """A number and its percent sign, and the sides of a '±', stay on one line."""
-    return text.replace(" %", "\N{NO-BREAK SPACE}%").replace(" ± ", "\N{NO-BREAK SPACE}±\N{NO-BREAK SPACE}")
+def _joined(text: str) -> Markup:
+    """Escaped; a number and its percent sign, the sides of a '±' and a date stay on one line."""
+    from markupsafe import Markup, escape
+
+    told = text.replace(" %", "\N{NO-BREAK SPACE}%").replace(" ± ", "\N{NO-BREAK SPACE}±\N{NO-BREAK SPACE}")
+    return Markup(DATE.sub(r'<span class="one">\g<0></span>', str(escape(told))))
 
 
 def _read(name: str) -> str:

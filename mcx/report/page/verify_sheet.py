@@ -11,7 +11,17 @@ from mcx.report.pictures.draw import Bar, Rung, bars, gap_ladder, moves
 from mcx.report.price_scale import Scale
 from mcx.report.scene import Scene
 from mcx.report.verify_results import ImpliedInput, VerifyResult
-from mcx.report.verify_view import ANSWERS, IN_PERCENT, MONEY, corner, footed, implied_row, money_rows, solved
+from mcx.report.verify_view import (
+    ANSWERS,
+    IN_PERCENT,
+    MONEY,
+    corner,
+    footed,
+    implied_row,
+    money_rows,
+    rest_row,
+    solved,
+)
 
 MOST_INPUTS, MOST_IMPLIED = 12, 18
 
@@ -28,6 +38,7 @@ def verify_sheet(result: VerifyResult, scene: Scene | None) -> Sheet:
         ("on our footing", mid),
         ("our price", f"{price}, standard error {scale.show(result.standard_error, places)}"),
         ("gap", f"{apart}, standard error {scale.show(gap.standard_error, places)} (quote less our price)"),
+        *rest_row(gap, scale, places),
         ("valued on", result.valuation or "time 0"),
         ("paths", f"{result.paths:,}; seed {result.seed}; variance reduction: {result.reduction}"))),
         *_ladder(result, scale, places)]
@@ -47,16 +58,18 @@ def _ladder(result: VerifyResult, scale: Scale, places: int) -> Iterator[Picture
     """The gap against each band, the model bracket where it lies; one that was not stated is in the table only."""
     bands = [Rung(band.name, -scale.factor * band.half_width, scale.factor * band.half_width, ANSWERS[band.holds])
              for band in result.bands if band.half_width is not None and band.name != MODEL]
-    found = result.model_bracket
-    bands += [Rung(band.name, scale.factor * (found.lower - result.price), scale.factor * (found.upper - result.price),
+    gap, bar, words, model = result.gap.price, "gap", "the gap", result.model_bracket
+    if result.gap.rest is not None:  # each strike at its own vol is the price, and no other end of the bracket
+        gap, bar, words, model = result.gap.rest, "left of the gap", "what is left of the gap", None
+    bands += [Rung(band.name, *(scale.factor * (end - result.compared) for end in (model.lower, model.upper)),
                    ANSWERS[band.holds]) for band in result.bands
-              if band.name == MODEL and found is not None and found.lower is not None]
-    apart, error = scale.factor * result.gap.price, scale.factor * result.gap.standard_error
-    shown = scale.show(result.gap.price, places)
-    said = f"Gap of {shown} {scale.unit}; " + "; ".join(
+              if band.name == MODEL and model is not None and model.lower is not None]
+    apart, error = scale.factor * gap, scale.factor * result.gap.standard_error
+    shown = scale.show(gap, places)
+    said = f"{bar[0].upper()}{bar[1:]}: {shown} {scale.unit}; " + "; ".join(
         f"{band.name} from {band.low:.4g} to {band.high:.4g}: holds it: {band.said}" for band in bands) + "."
-    title = "the gap and what may hold it, each by itself"
-    yield Picture(title, gap_ladder(title, said, Bar("gap", apart, error, shown), bands, scale.unit),
+    title = f"{words} and what may hold it, each by itself"
+    yield Picture(title, gap_ladder(title, said, Bar(bar, apart, error, shown), bands, scale.unit),
                   "The gap is held where its broken line meets the band.")
     yield Table("in numbers", ("", f"half-width, {scale.unit}", "holds it"), tuple(
         (band.name, "not stated" if band.half_width is None else scale.show(band.half_width, places),

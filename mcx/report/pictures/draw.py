@@ -209,10 +209,10 @@ def errors(title: str, said: str, series: Sequence[Series], across: str, up: str
     y = scale([number for each in logs for _, number in each.points], foot, TOP)
     canvas.across([(y(tick), written(10.0**tick)) for tick in y.powers()], LEFT + 14, WIDE - right)
     canvas.along([(x(tick), written(10.0**tick)) for tick in x.powers()], foot, LEFT + 14, WIDE - right)
-    _drawn(canvas, x, y, logs)
     for each in logs:  # to the edge, where the names are
         last = each.points[-1]
         canvas.segment(x(last[0]), y(last[1]), WIDE - right, y(last[1]), "grid")
+    _drawn(canvas, x, y, logs)
     canvas.labels(WIDE - right, [(y(each.points[-1][1]), each.name, "words") for each in logs], TOP, foot)
     canvas.text(0, 10, fit(up, WIDE), kind="soft")
     canvas.text(WIDE - right, height - 4, across, "end", "soft")

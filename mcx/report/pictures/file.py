@@ -115,21 +115,22 @@ def _paint(axes: Axes, node: ElementTree.Element, dx: float, dy: float) -> None:
         return float(node.get(x)) + dx, float(node.get(y)) + dy
 
     points = [(float(x) + dx, float(y) + dy) for x, y in (pair.split(",") for pair in node.get("points", "").split())]
+    over = len(axes.get_children())  # painted in the order of the file, as an SVG is
     thick = POINTS * float(node.get("stroke-width", 1.0))
-    filled = {"facecolor": node.get("fill"), "alpha": float(node.get("fill-opacity", 1.0)), "linewidth": 0.0}
+    filled = {"facecolor": node.get("fill"), "alpha": float(node.get("fill-opacity", 1.0)), "linewidth": 0.0, "zorder": over}
     match node.tag:
         case "text":
             side = {"start": "left", "middle": "center", "end": "right"}[node.get("text-anchor")]
             axes.text(*at("x", "y"), node.text or "", color=node.get("fill"), ha=side, va="baseline",
-                      fontsize=0.92 * POINTS * SIZE, parse_math=False)
+                      fontsize=0.92 * POINTS * SIZE, parse_math=False, zorder=over)
         case "line":
             (x1, y1), (x2, y2) = at("x1", "y1"), at("x2", "y2")
-            axes.add_line(Line2D((x1, x2), (y1, y2), color=node.get("stroke"), linewidth=thick))
+            axes.add_line(Line2D((x1, x2), (y1, y2), color=node.get("stroke"), linewidth=thick, zorder=over))
         case "polyline":
             dashes = [float(length) for length in node.get("stroke-dasharray", "").split()]
             style = (0, [length * POINTS / thick for length in dashes]) if dashes else "-"
             axes.add_line(Line2D(*zip(*points, strict=True), color=node.get("stroke"), linewidth=thick,
-                                 linestyle=style))
+                                 linestyle=style, zorder=over))
         case "polygon":
             axes.add_patch(Polygon(points, **filled))
         case "circle":

@@ -11,20 +11,24 @@ from pathlib import Path
 import closed_forms as forms
 import numpy as np
 import pytest
-from scipy.special import ndtr
+from scipy.special import ndtr, ndtri
 from test_laws import FLAT, SEED, made
 
 from mcx.checked.load import load
 from mcx.dates.dating import date_on
+from mcx.estimators.estimate import Estimate
+from mcx.estimators.plan import Independent
 from mcx.estimators.ready import prepare
 from mcx.estimators.reduction.candidates import Market, _exchange, candidates, evenly
 from mcx.estimators.reduction.catalogue import scheme_of
+from mcx.estimators.reduction.comparison import Compared, _doubt, closed_form, z_scores
 from mcx.estimators.reduction.controls import change
 from mcx.estimators.reduction.fit import PILOT_PATHS
 from mcx.estimators.reduction.hedge import change as hedge
 from mcx.estimators.reduction.laws import Lognormal, Walk, above_mean, call_mean, exchange_mean
 from mcx.estimators.reduction.residual import residuals
-from mcx.estimators.reduction.scheme import Case, Draft
+from mcx.estimators.reduction.sample import Sampler
+from mcx.estimators.reduction.scheme import Case, Draft, Scheme
 from mcx.estimators.reduction.turning import Terms, Turn, turns
 from mcx.estimators.reduction.watched import Watched
 from mcx.machine.run import Stream, draws, run, values_by_path
@@ -208,3 +212,35 @@ def test_a_pilot_grows_with_the_candidates(monkeypatch: pytest.MonkeyPatch):
     assert scheme_of(case, ("controls",)).fit_paths == PILOT_PATHS
     monkeypatch.setattr("mcx.estimators.reduction.fit.PATHS_EACH", 2000)
     assert 2000 * candidates_of <= scheme_of(case, ("controls",)).fit_paths < 4000 * candidates_of
+
+
+def compared(values: list[float], errors: list[float]) -> list[Compared]:
+    """Choices with these prices and errors."""
+    return [Compared(Scheme((), None), Estimate(value, error, 100), 1.0, 0.0, 1.0, ())
+            for value, error in zip(values, errors, strict=True)]
+
+
+def test_each_choice_is_held_against_all_others():
+    """By their variances, and never against itself; errors of exactly 0 are taken as rounding."""
+    found = list(z_scores(compared([1.0, 1.2, 1.2], [0.1, 0.1, 0.2])))
+    assert found[0] == pytest.approx(-0.2 / sqrt(0.01 + 1.0 / (1.0 / 0.01 + 1.0 / 0.04)), rel=1e-9)
+    assert list(z_scores(compared([1.0], [0.1]))) == [0.0]
+    exact = list(z_scores(compared([1.0, 1.1, 1.0], [0.0, 0.1, 0.0])))
+    assert np.isfinite(exact).all() and exact[1] == pytest.approx(1.0, rel=1e-6)
+    assert closed_form(compared([1.0, 1.1], [0.0, 0.1])) == 1.0 and closed_form(compared([1.1], [0.1])) is None
+
+
+@pytest.mark.parametrize(("count", "spread"), [(32, sqrt(2.0 / 31)), (4096, sqrt(2.0 / 4096))])
+def test_how_well_a_variance_is_known(count: int, spread: float):
+    """By the chi-squared law for the means of scrambles, from the fourth moment of many normal ones."""
+    values = ndtri((np.arange(count) + 0.5) / count)
+    assert _doubt(Independent(values)) == pytest.approx(spread, rel=0.05)
+
+
+def test_a_run_has_at_least_two_of_what_is_independent():
+    """Two strata of pairs are 256 paths; stages of points are at a quarter and at half of the scrambles."""
+    case = Case(made("average", FLAT), SEED)
+    sampler = Sampler(scheme_of(case, ("antithetic", "stratified")), SEED)
+    assert (sampler.paths(1), sampler.paths(257)) == (256, 384)
+    stages = Sampler(scheme_of(case, ("sobol-bridge",)), SEED).sample(1 << 13, first_output_only=True).stages
+    assert [each.paths for each in stages] == [1 << 11, 1 << 12, 1 << 13]
