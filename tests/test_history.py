@@ -413,8 +413,9 @@ def test_calendar_says_which_payments_are_certain(tmp_path: Path, change: tuple[
             "  - {at: early, pay: 1, as: coupon}\n  - {at: seen, if: spot > 100, then: [end]}\n"
             "  - {at: expiry, pay: 1, as: coupon}\n  - {at: expiry, pay: \"max(100 - spot, 0)\", as: put}\n---\n"
             "contract: note\ncurrency: EUR\nunits: 1\nassets: [harbour]\nstart: 2026-12-01\n"
-            "settlement: 0 business days\ncalendar: {holidays: none, roll: following}\npayoff: sample\nterms: {early: 2027-03-01, seen: 2027-06-01, "
-            "expiry: 2027-12-01}\n---\nmarket: 2026-12-01\nrates: {EUR: 2%}\nassets:\n"
+            "settlement: 0 business days\ncalendar: {holidays: none, roll: following}\npayoff: sample\n"
+            "terms: {early: 2027-03-01, seen: 2027-06-01, expiry: 2027-12-01}\n"
+            "---\nmarket: 2026-12-01\nrates: {EUR: 2%}\nassets:\n"
             "  harbour: {spot: 100, currency: EUR, yield: 0%, vol: 20%}\n")
     if change:
         assert change[0] in text

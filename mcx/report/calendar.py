@@ -19,7 +19,8 @@ CERTAIN, OPEN, DOUBTFUL = DOUBTS = ("", " (amount open)", " (if it is due)")  # 
 def calendar(contracts: Iterable[tuple[DatedContract, State | None]]) -> CalendarView:
     """Fixings, decisions and payments from the valuation date on, in order of time; of contracts that have ended only
     what is still owed. A payment is said to be open where its amount follows from levels, and doubtful where a
-    condition or an earlier end may take it away. Without a state nothing is known of the past, and all dates are listed."""
+    condition or an earlier end may take it away. Without a state nothing is known of the past, and all dates are
+    listed."""
     contracts = list(contracts)
     lines = [line for dated, state in contracts for line in _lines(dated, state)]
     versions = dict.fromkeys(dated.calendar_version for dated, _ in contracts if dated.calendar_version)
