@@ -127,8 +127,8 @@ def limits(dated: DatedContract, model: ModelBracket | None = None) -> Iterator[
     yield ("risk-neutral lognormal levels with one vol for each asset and tenor: no skew, no stochastic vol, no jumps; "
            "rates, yields and dividends are known in advance")
     if model is not None and model.exact:
-        yield ("the headline takes one vol for each asset and tenor; the strip, with each payment at the vol of its own "
-               "strike, is what vols by strike say of this contract")
+        yield ("one vol for each asset and tenor cannot do better than the model bracket; the strip, with each payment at "
+               "the vol of its own strike, is what vols by strike say of this contract")
     elif model is not None:
         yield ("the model bracket is how far vols by strike leave the price open; one vol for each asset and tenor "
                "cannot do better: neither more paths nor better inputs decide what lies inside it")
