@@ -243,3 +243,10 @@ def test_no_reading_closes_what_is_closed():
     left = {each["reading"]: each for each in found["readings"]}["knock-in at each close"]
     assert abs(left["left"]) < 4.0 * found["gap"]["standard_error"]
     assert not any(each["closes_gap"] for each in found["readings"])
+
+
+def test_what_is_not_in_the_model_fits_what_the_bracket_says():
+    """Of a contract that a strip decides nothing is left open by vols by strike; of another it is."""
+    strip, path = (each["limits"] for each in mcx("price", EXAMPLE, *ASKED, "--json").json["prices"])
+    assert any("the strip" in each for each in strip) and not any("neither more paths" in each for each in strip)
+    assert any("neither more paths" in each for each in path)
