@@ -124,6 +124,26 @@ def test_one_fixing_alone_of_a_composite_level_is_said_to_be_left_out(day: str, 
                for each in found.dated.assumptions) == fixed
 
 
+@pytest.mark.parametrize(("rate", "level", "said"), [
+    (1.10, 47.0, []), (1.22, 51.0, []),
+    (1.10, 42.0, ["lantern was fixed at 38.1818 on 2027-09-01, the valuation date, and stands at 45.4545, 1.19 times "
+                  "that (common practice: within 10 %): do both mean the same level?"]),
+    (0.91, 41.4, ["USD per EUR was fixed at 0.91 on 2027-03-01 and stands at 1.1: is the fixing the rate the other way "
+                  "round?"])])
+def test_fixings_that_do_not_go_with_the_spot_are_asked_about(tmp_path: Path, rate: float, level: float,
+                                                              said: list[str]):
+    """A fixing far from the spot of its own day, and a rate of exchange that looks turned round."""
+    levels = LEVELS | {("lantern", "2027-09-01"): level} | {
+        ("USD per EUR", day): rate for day in ("2027-03-01", "2027-06-01", "2027-09-01")}
+    text = (WORST_OF.replace("payoff:", "conversion: {lantern: composite}\npayoff:")
+            + market("2027-09-01").replace("lantern: {spot: 47, currency: EUR", "lantern: {spot: 50, currency: USD")
+            .replace("rates: {EUR: 2%}", "rates: {EUR: 2%, USD: 3%}\nfx: {USD per EUR: {spot: 1.1, vol: 8%}}").replace(
+                "50%}\n", "50%, harbour/USD per EUR: 0%, lantern/USD per EUR: 0%}\n") + fixings(levels))
+    file = written(tmp_path, text)
+    assert [each for each in package.readback(file).warnings if "was fixed at" in each] == said
+    assert [each for each in package.price(file, paths=64).warnings if "was fixed at" in each] == said
+
+
 # What happened
 
 TOUCH = """contract: touch
@@ -279,6 +299,14 @@ def test_a_split_of_a_watched_asset():
     assert prepare(split).price(4096, SEED).mean == pytest.approx(prepare(plain).price(4096, SEED).mean, rel=1e-12)
 
 
+def test_a_contradiction_names_the_fixing_as_it_was_published(tmp_path: Path):
+    """And what it counts as, where an adjustment makes the two differ."""
+    split = touch("{2027-06-01: false}").replace(
+        "payoff:", "adjustments: {harbour: {2027-05-03: 0.5}}\npayoff:", 1)
+    found = faults(tmp_path, split + "fixings: {harbour: {2027-05-05: 91}}\n")
+    assert any("harbour was fixed at 91 on 2027-05-05, which counts as 45.5" in each for each in found), found
+
+
 # Levels to be fixed
 
 
@@ -372,6 +400,30 @@ def test_calendar(tmp_path: Path):
     assert "2027-12-01" in mcx("readback", tmp_path / "case.yaml", "--calendar").out
 
 
+@pytest.mark.parametrize(("change", "said"), [
+    (None, ["coupon", "coupon (if it is due)", "put (if it is due)"]),
+    (("{at: seen, if: spot > 100, then: [end]}", "{at: seen, if: spot > 100, then: [pay: 1]}"),
+     ["coupon", "payment (if it is due)", "coupon", "put (amount open)"]),
+    (("{at: seen, if: spot > 100, then: [end]}", "{at: {once: far}, end}"),
+     ["coupon (if it is due)", "coupon (if it is due)", "put (if it is due)"])])
+def test_calendar_says_which_payments_are_certain(tmp_path: Path, change: tuple[str, str] | None, said: list[str]):
+    """A coupon is, until a condition or an end may come before it; an amount that hangs on levels is open."""
+    text = ("payoff: sample\nassets: 1\nterms: {early: {type: date}, seen: {type: date}, expiry: {type: date}}\n"
+            "running:\n  far: {ever: spot > 900, at: {continuous: [early, expiry]}}\nevents:\n"
+            "  - {at: early, pay: 1, as: coupon}\n  - {at: seen, if: spot > 100, then: [end]}\n"
+            "  - {at: expiry, pay: 1, as: coupon}\n  - {at: expiry, pay: \"max(100 - spot, 0)\", as: put}\n---\n"
+            "contract: note\ncurrency: EUR\nunits: 1\nassets: [harbour]\nstart: 2026-12-01\n"
+            "settlement: 0 business days\ncalendar: {holidays: none, roll: following}\npayoff: sample\n"
+            "terms: {early: 2027-03-01, seen: 2027-06-01, expiry: 2027-12-01}\n"
+            "---\nmarket: 2026-12-01\nrates: {EUR: 2%}\nassets:\n"
+            "  harbour: {spot: 100, currency: EUR, yield: 0%, vol: 20%}\n")
+    if change:
+        assert change[0] in text
+        text = text.replace(*change)
+    lines = package.readback(written(tmp_path, text), calendar=True).lines
+    assert [each.of for each in lines if each.kind == "payment"] == said
+
+
 @pytest.mark.parametrize(("asset", "known"), list(product(("harbour", "lantern"), (True, False))))
 def test_readback_and_price_ask_for_the_same_fixings(tmp_path: Path, asset: str, known: bool):
     """Both stop, or neither does."""
@@ -383,7 +435,8 @@ def test_readback_and_price_ask_for_the_same_fixings(tmp_path: Path, asset: str,
 
 
 @pytest.mark.parametrize(("stated", "said"), [
-    ("disruption: {lantern: {2027-06-02: 2027-06-03}}", "'lantern' is not observed on 2027-06-02"),
+    ("disruption: {lantern: {2027-06-02: 2027-06-03}}", "'lantern' is not observed on 2027-06-02, so that no "
+     "observation is moved; the nearest observation is on 2027-06-01"),
     ("happened: {hit: {2027-06-02: true}}", "'hit' is not watched all the time in this contract"),
     ("happened: {missed: {2027-06-02: 1}}", "'missed' is not a running value that can be watched all the time"),
     ("adjustments: {quarry: {2027-06-02: 2}}", "'quarry' is not an asset of the contract"),
@@ -449,5 +502,5 @@ def test_hits_of_a_watch_that_has_begun():
     begun = HIT.replace("START", "2026-12-01").replace("---", "happened: {touched: {2027-06-01: false}}\n---")
     one, other = (prepare(text).price(1 << 12, 7) for text in (fresh, begun))
     assert (one.mean, one.error) == (other.mean, other.error)
-    with pytest.raises(AssertionError, match="'touched' came true before the valuation date"):
+    with pytest.raises(AssertionError, match="'touched' has come true already"):
         prepare(begun.replace("2027-06-01: false", "2027-05-31: true"))

@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
+import re
 from types import MappingProxyType
 
 from mcx.checked.reading import listed
-from mcx.faults import Fault, did_you_mean
+from mcx.faults import Fault, nearest
 from mcx.text.located import Node, Scalar
 from mcx.text.scalars import expected
 
@@ -29,6 +30,17 @@ def day_count_name(node: Node) -> str | Fault:
     """The name of a day count, as `dates/day_counts.py` writes it."""
     if isinstance(node, Scalar) and node.text in DAY_COUNTS:
         return DAY_COUNTS[node.text]
-    near = did_you_mean(node.text, DAY_COUNTS) if isinstance(node, Scalar) else ""
+    near = _meant(node.text) if isinstance(node, Scalar) else ""
     names = listed(dict.fromkeys(DAY_COUNTS.values()), "or")
-    return expected(f"a day count: {names}", node, near.removeprefix("; "))
+    return expected(f"a day count: {names}", node, near)
+
+
+def _meant(text: str) -> str:
+    """'did you mean …?' for a near miss that counts the same days: no year of 364 days is taken for one of 360."""
+    alike = {name.lower(): meant for name, meant in DAY_COUNTS.items() if _numbers(name) == _numbers(text)}
+    near = nearest(text.lower(), alike)
+    return f"did you mean '{alike[near]}'?" if near else ""
+
+
+def _numbers(text: str) -> list[str]:
+    return re.findall(r"\d+", text)

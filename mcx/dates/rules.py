@@ -10,6 +10,7 @@ from __future__ import annotations
 import datetime
 from collections.abc import Iterator
 from fractions import Fraction
+from itertools import pairwise
 
 from mcx.checked.contract import Contract, DayList, DayRef, DayRule, LevelFixing, Period, Stretch
 from mcx.dates.business_days import GoodDays, NotCovered
@@ -130,10 +131,13 @@ class TermDays:
         if not value.days:
             raise WrongDates(value.place, "no dates are listed")
         days = [self.single(ref) for ref in value.days]
-        for ref, before, day in zip(value.days[1:], days, days[1:], strict=False):
+        for (earlier, before), (ref, day) in pairwise(zip(value.days, days, strict=True)):
             if day.time <= before.time:
+                rolls = [f"{said.date} rolls to {found}" for said, found in ((earlier, before), (ref, day))
+                         if said.date not in (None, found.date)]
+                rolled = f" ({' and '.join(rolls)})" if rolls else ""
                 what = "is listed twice" if day.time == before.time else f"is listed after {before}"
-                raise WrongDates(ref.place, f"{day} {what}; dates are listed in order, each once")
+                raise WrongDates(ref.place, f"{day} {what}{rolled}; dates are listed in order, each once")
         return tuple(days)
 
     def _ruled(self, rule: DayRule) -> Iterator[Day]:

@@ -6,6 +6,7 @@ The limits are rules of thumb, common practice; what they find is a warning, not
 from __future__ import annotations
 
 from collections.abc import Iterator
+from math import log
 
 from mcx.checked.contract import Figures
 from mcx.checked.payoff import Term
@@ -15,6 +16,8 @@ from mcx.report.settled import Settled, right_sides
 from mcx.report.wording import figure
 
 LEVELS = (0.2, 5.0)  # today's level over one of the contract
+CLOSE = 0.1  # the spot from a fixing of the same day, as a part of it
+TURNED = 0.15  # in logs: a rate of exchange that is this far from the spot and nearer to one over it
 LARGEST_PERCENT = 5.0
 MONTH = 31.0 / 365.0  # years that a watch may end before it is read
 LONGEST = 30.0  # years to the last date
@@ -28,6 +31,9 @@ def implausible(dated: DatedContract, market: MarketMap | None) -> Iterator[str]
         if isinstance(value, Figures):
             yield from _percent(term, value)
             yield from _levels(term, value, dated, market) if market else ()
+    if market:
+        yield from _todays_fixings(dated, market)
+        yield from _turned_rates(dated, market)
     yield from _watches(dated)
     if dated.last.time > LONGEST:
         yield (f"the last date is {dated.last}, in {dated.last.time:.0f} years (common practice: up to 30): is that "
@@ -52,6 +58,29 @@ def _levels(term: Term, value: Figures, dated: DatedContract, market: MarketMap)
             if level > 0.0 and level != 1.0 and not LEVELS[0] <= today / level <= LEVELS[1]:
                 yield (f"'{term.name}' is {figure(level)} and {asset} stands at {figure(today)}, {today / level:.3g} "
                        f"times that (common practice: 0.2 to 5 times): do both mean the same level?")
+                break
+
+
+def _todays_fixings(dated: DatedContract, market: MarketMap) -> Iterator[str]:
+    """Fixings of the valuation date that are far from the spot of the same day, levels as they count."""
+    history = dated.history
+    scale = history.scale or (1.0,) * len(dated.contract.assets)
+    for number, asset in enumerate(dated.contract.assets):
+        fixed, today = history.levels.get((number, history.valuation)), market.forward(asset, 0.0) * scale[number]
+        if fixed is not None and abs(today / fixed - 1.0) > CLOSE:
+            yield (f"{asset} was fixed at {fixed:.6g} on {history.valuation}, the valuation date, and stands at "
+                   f"{today:.6g}, {today / fixed:.3g} times that (common practice: within 10 %): do both mean the "
+                   "same level?")
+
+
+def _turned_rates(dated: DatedContract, market: MarketMap) -> Iterator[str]:
+    """Fixings of a rate of exchange that look like the rate the other way round."""
+    for rate in market.rates_of_exchange:
+        spot = rate.spot.value
+        for date, fixed in sorted(dated.history.published.get(rate.name, {}).items()):
+            if date <= dated.history.valuation and abs(log(fixed * spot)) < abs(log(fixed / spot)) > TURNED:
+                yield (f"{rate.name} was fixed at {figure(fixed)} on {date} and stands at {figure(spot)}: is the "
+                       "fixing the rate the other way round?")
                 break
 
 

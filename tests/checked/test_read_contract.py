@@ -187,7 +187,13 @@ SLIPS = [
     ("day_count: 30/360\n", "", "1:1: 'day_count' is missing in the contract: 'sampler' pays by 'period'"),
     ("30/360", "30/365",
      "6:12: expected a day count: 'Actual/Actual (ISDA)', 'Actual/Actual (ICMA)', 'Actual/365 (Fixed)', "
-     "'Actual/360', '30/360', '30E/360' or '30E/360 (ISDA)', found '30/365'; did you mean '30/360'?"),
+     "'Actual/360', '30/360', '30E/360' or '30E/360 (ISDA)', found '30/365'"),
+    ("30/360", "ACT/364",
+     "6:12: expected a day count: 'Actual/Actual (ISDA)', 'Actual/Actual (ICMA)', 'Actual/365 (Fixed)', "
+     "'Actual/360', '30/360', '30E/360' or '30E/360 (ISDA)', found 'ACT/364'"),
+    ("30/360", "ACT/365",
+     "6:12: expected a day count: 'Actual/Actual (ISDA)', 'Actual/Actual (ICMA)', 'Actual/365 (Fixed)', "
+     "'Actual/360', '30/360', '30E/360' or '30E/360 (ISDA)', found 'ACT/365'; did you mean 'Actual/365 (Fixed)'?"),
     ("2 business days", "2 days",
      "7:13: expected a number of business days, as '2 business days', found '2 days'"),
     ("2 business days", "9999 business days",

@@ -131,7 +131,7 @@ def test_lists_keep_order():
     second = Place("note.yaml", 12, 30)
     assert days_of(DayList(PLACE, (day("2027-02-06"), day("2027-02-10")))) == ["2027-02-08", "2027-02-10"]
     assert days_of(DayList(PLACE, (day("2027-02-06"), day("2027-02-08", second)))) == [
-        "note.yaml:12:30: 2027-02-08 is listed twice; dates are listed in order, each once"]
+        "note.yaml:12:30: 2027-02-08 is listed twice (2027-02-06 rolls to 2027-02-08); dates are listed in order, each once"]
     assert days_of(DayList(PLACE, (day("2027-02-12"), day("2027-02-08", second)))) == [
         "note.yaml:12:30: 2027-02-08 is listed after 2027-02-12; dates are listed in order, each once"]
 
