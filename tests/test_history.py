@@ -400,6 +400,17 @@ def test_calendar(tmp_path: Path):
     assert "2027-12-01" in mcx("readback", tmp_path / "case.yaml", "--calendar").out
 
 
+def test_calendar_leaves_out_what_todays_fixings_have_decided(tmp_path: Path):
+    """Without them the valuation date is still to come."""
+    for known, first in ((LEVELS, "2027-09-03"), ({key: level for key, level in LEVELS.items() if key[1] < "2027-09"},
+                                                  "2027-09-01")):
+        text = WORST_OF + market("2027-09-01") + fixings(known)
+        lines = package.readback(written(tmp_path, text), calendar=True).lines
+        assert lines[0].date == first
+        assert any(each.of == "redemption (if it is due)" and each.date == "2027-09-03" for each in lines) == (
+            first == "2027-09-01")
+
+
 @pytest.mark.parametrize(("change", "said"), [
     (None, ["coupon", "coupon (if it is due)", "put (if it is due)"]),
     (("{at: seen, if: spot > 100, then: [end]}", "{at: seen, if: spot > 100, then: [pay: 1]}"),
