@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import datetime
+from bisect import bisect_left
 from collections.abc import Iterable
 from dataclasses import dataclass
 
@@ -173,6 +174,27 @@ class Watched:
         date the good day before it."""
         history = self.observations.history
         return history.eve if day.date == history.valuation and history.eve else day.date
+
+    def turned(self) -> tuple[datetime.date | None, datetime.date] | None:
+        """Between which dates a flag turned, as far as statements and fixings up to the valuation date tell: after the
+        first (None: since the watch began) and by the second. None where they do not say that it has."""
+        history, watch = self.observations.history, self.watch
+        stated, turned = history.stated.get(watch.running.name, {}), float(watch.running.how == "ever")
+        if watch.start.date is None or watch.start.time >= 0.0:
+            return None
+        last = min(watch.end.date, history.valuation)
+        dates = sorted(date for date in {*stated, *(date for _, date in history.levels)}
+                       if watch.start.date <= date <= last)
+
+        def by_then(date: datetime.date) -> bool:
+            said = any(known.value == turned for when, known in stated.items() if when <= date)
+            return said or self._by_fixings(Day(-1.0, date)) == turned
+
+        first = bisect_left(dates, True, key=by_then)
+        if first == len(dates):
+            return None
+        before = [date for date, known in stated.items() if date < dates[first] and known.value != turned]
+        return max(before, default=None), dates[first]
 
     def _by_fixings(self, day: Day) -> float | None:
         """The value that the fixings from the start of the watch up to a day give; None without any."""

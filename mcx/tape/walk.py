@@ -23,6 +23,7 @@ from mcx.tape.ledger import Ledger, Payment
 from mcx.tape.moments import moments_without_law
 from mcx.tape.observations import Observations
 from mcx.tape.ops import Op
+from mcx.tape.past_hits import PastHit, past_hit
 from mcx.tape.program import Leaf, LeafKind
 from mcx.tape.running import FOLDS, Observed, Watched
 from mcx.tape.shares import Shares
@@ -32,9 +33,6 @@ from mcx.tape.state import Accruing, FixedAmount, PastEvent, State
 AT_A_HIT = ("shares cannot be delivered at the moment of a hit that is watched continuously: their level on the "
             "delivery date, which depends on that moment, is not known; deliver on a date")
 NO_NUMBER = "'{}' is no number before its last fixing, on {}, and what is watched all the time is held against numbers"
-PAST_HIT = ("'{}' has come true already, and at which moment is not read, nor what was paid then or is owed still; "
-            "a contract that has ended and owes nothing needs no price; otherwise watch it on dates, whose fixings "
-            "tell the day")
 
 
 @dataclass(slots=True)
@@ -74,6 +72,8 @@ class Walk:
                 self.observed[running.name] = Watched(watches[running.name], self.formulas, self.observations, start)
             else:
                 self.observed[running.name] = Observed(running, self.formulas, start, 1 if start else 0)
+        found = (past_hit(hit, self.observed[hit.watch.running.name]) for hit in dated.hits)
+        self._past = sorted((past for past in found if past), key=lambda past: past.last.time)
 
     def run(self) -> None:
         """Walk every moment, until the contract has ended on every path."""
@@ -124,7 +124,14 @@ class Walk:
                 self.state.running.pop(running.name, None)
 
     def _hit_until(self, time: float) -> None:
-        """Everything that happens at hits up to a time."""
+        """Everything that happens at hits up to a time, those of the past first."""
+        while self._past and self._past[0].last.time <= time:
+            past = self._past.pop(0)
+            if self.builder.number(self.alive) != 0.0:
+                try:
+                    self._past_hit(past)
+                except Unreadable as trouble:
+                    self._note(trouble)
         for stretch in self.hits.until(time):
             if self.builder.number(self.alive) != 0.0:
                 try:
@@ -133,11 +140,8 @@ class Walk:
                     self._note(trouble)
 
     def _hit(self, stretch: Stretch) -> None:
-        event = stretch.hit.event
-        watch = stretch.hit.watch
+        event, watch = stretch.hit.event, stretch.hit.watch
         before, after = self.hits.turn(stretch, self.observed[watch.running.name])
-        if watch.start.time < 0.0 and stretch.start == stretch.end and self.builder.number(before) == 1.0:
-            raise Unreadable(event.at.place, PAST_HIT.format(watch.running.name))
         turns = self._newly(before, after, event.at.place)
         if self.builder.number(turns) == 0.0 or self.observed[watch.running.name].lacking:
             return
@@ -146,6 +150,14 @@ class Walk:
         self._carry_out(event, stretch.day, turns, condition, scene,
                         due=lambda pay: self.hits.due(stretch, pay, scene.part),
                         otherwise_due=lambda: self.hits.time(stretch, scene.part))
+
+    def _past_hit(self, past: PastHit) -> None:
+        event, scene = past.event(self.dated.contract), past.scene(self.builder, self.dated.start)
+        constant = self.builder.constant
+        condition = self.formulas.one(event.condition, scene) if event.condition else constant(1.0)
+        self._carry_out(event, past.day, constant(1.0), condition, scene, due=lambda pay: past.due(pay, self.builder),
+                        otherwise_due=lambda: constant(past.last.time))
+        self.state.events.append(PastEvent(past.hit.event, past.day, bool(self.builder.number(condition))))
 
     def _newly(self, before: int, after: int, place: Place) -> int:
         """Whether a flag holds that did not before."""
