@@ -1,10 +1,10 @@
 """What scrambled points cost and what they save, against pseudo-random numbers in the same run.
 
 Prints, for an Asian call on 52 dates, an autocall on 12, a monthly cliquet of 5 years and an average of five assets
-over 52 dates, and for each order of a path: the time at equal paths as a ratio to pseudo-random numbers (processor time of
-one thread, the median of the ratios of pairs run one after the other), and the variance of the mean of 2^16 paths as a
-ratio, from 512 scrambles, with its own error by the chi-squared law. The bridge is the one that the contract gets: with
-its early dates early where it may end on them.
+over 52 dates, and for each order of a path: the time at equal paths as a ratio to pseudo-random numbers (processor
+time of one thread, the median of the ratios of pairs run one after the other), and the variance of the mean of 2^16
+paths as a ratio, from 512 scrambles, with its own error by the chi-squared law. The bridge is the one that the
+contract gets: with its early dates early where it may end on them.
 
     python benchmarks/points.py
 """
