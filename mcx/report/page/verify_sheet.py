@@ -20,6 +20,7 @@ from mcx.report.verify_view import (
     implied_row,
     money_rows,
     rest_row,
+    signed,
     solved,
 )
 
@@ -89,7 +90,10 @@ def _implied(result: VerifyResult) -> Iterator[Picture | Table | Notes]:
         yield Picture(title, moves(title, said, drawn, "half-widths; shaded: inside the band"))
     rows, left = cut([_told(each, halves.get((each.input, each.asset))) for each in result.implied], MOST_IMPLIED)
     heads = ("input", "value", "error", "move", "± stated", "inside")
-    yield Table("what would have to be true, each input alone", heads, rows, tail=5, note=left)
+    nowhere = [f"{_named(each)}: no move from {signed(each.low)} to {signed(each.high)} meets the quote"
+               for each in result.implied if each.value is None and not implied_row(each)[-1]]
+    yield Table("what would have to be true, each input alone", heads, rows, tail=5,
+                note="; ".join(filter(None, (left, *nowhere))))
     if result.joint is not None:
         found = (f"{' '.join(filter(None, (each.input, each.asset)))} by {each.half_widths:+.2f} of its half-width"
                  for each in result.joint.moves)
@@ -97,15 +101,19 @@ def _implied(result: VerifyResult) -> Iterator[Picture | Table | Notes]:
 
 
 def _told(each: ImpliedInput, half: float | None) -> tuple[str, ...]:
-    """A row of the page, which has less width than a terminal: the input as one word."""
-    name, asset, *numbers, inside = implied_row(each)
-    return " ".join(filter(None, (name, asset))), *numbers, _move(half), inside
+    """A row of the page, which is narrower than a terminal: the input in one cell, the range of no solution below."""
+    _, _, value, error, move, inside = implied_row(each)
+    return _named(each), value, error, "" if each.value is None else move, _move(half), inside
+
+
+def _named(each: ImpliedInput) -> str:
+    return " ".join(filter(None, (each.input, each.asset)))
 
 
 def _in_halves(each: ImpliedInput, half: float) -> Bar:
     """A move in half-widths; the error of a forward's level as a share, as its move is."""
     share = 1.0 if each.input in IN_PERCENT or each.measure == "move" else (1.0 + each.move) / each.value
-    return Bar(" ".join(filter(None, (each.input, each.asset))), each.move / half,
+    return Bar(_named(each), each.move / half,
                abs(each.standard_error * share / half), implied_row(each)[2].split(" at ")[0])
 
 
