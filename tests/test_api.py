@@ -80,6 +80,13 @@ def test_no_files():
             verb()
 
 
+def test_a_list_is_no_file():
+    """Files are arguments, one for each."""
+    for verb in (mcx.price, mcx.readback):
+        with pytest.raises(RequestError, match="one argument for each, found .'note.yaml', 'market.yaml'."):
+            verb(["note.yaml", "market.yaml"])
+
+
 def test_faults_come_as_values(tmp_path: Path):
     """Each with its place, sorted as the files read; the text has one line for each."""
     with pytest.raises(InputError) as found:

@@ -299,6 +299,14 @@ def test_a_split_of_a_watched_asset():
     assert prepare(split).price(4096, SEED).mean == pytest.approx(prepare(plain).price(4096, SEED).mean, rel=1e-12)
 
 
+def test_a_contradiction_names_the_fixing_as_it_was_published(tmp_path: Path):
+    """And what it counts as, where an adjustment makes the two differ."""
+    split = touch("{2027-06-01: false}").replace(
+        "payoff:", "adjustments: {harbour: {2027-05-03: 0.5}}\npayoff:", 1)
+    found = faults(tmp_path, split + "fixings: {harbour: {2027-05-05: 91}}\n")
+    assert any("harbour was fixed at 91 on 2027-05-05, which counts as 45.5" in each for each in found), found
+
+
 # Levels to be fixed
 
 
@@ -392,6 +400,17 @@ def test_calendar(tmp_path: Path):
     assert "2027-12-01" in mcx("readback", tmp_path / "case.yaml", "--calendar").out
 
 
+def test_calendar_leaves_out_what_todays_fixings_have_decided(tmp_path: Path):
+    """Without them the valuation date is still to come."""
+    for known, first in ((LEVELS, "2027-09-03"), ({key: level for key, level in LEVELS.items() if key[1] < "2027-09"},
+                                                  "2027-09-01")):
+        text = WORST_OF + market("2027-09-01") + fixings(known)
+        lines = package.readback(written(tmp_path, text), calendar=True).lines
+        assert lines[0].date == first
+        assert any(each.of == "redemption (if it is due)" and each.date == "2027-09-03" for each in lines) == (
+            first == "2027-09-01")
+
+
 @pytest.mark.parametrize(("change", "said"), [
     (None, ["coupon", "coupon (if it is due)", "put (if it is due)"]),
     (("{at: seen, if: spot > 100, then: [end]}", "{at: seen, if: spot > 100, then: [pay: 1]}"),
@@ -404,9 +423,10 @@ def test_calendar_says_which_payments_are_certain(tmp_path: Path, change: tuple[
             "running:\n  far: {ever: spot > 900, at: {continuous: [early, expiry]}}\nevents:\n"
             "  - {at: early, pay: 1, as: coupon}\n  - {at: seen, if: spot > 100, then: [end]}\n"
             "  - {at: expiry, pay: 1, as: coupon}\n  - {at: expiry, pay: \"max(100 - spot, 0)\", as: put}\n---\n"
-            "contract: note\ncurrency: EUR\nunits: 1\nassets: [harbour]\nstart: 2026-12-01\nsettlement: 0 business days\n"
-            "calendar: {holidays: none, roll: following}\npayoff: sample\nterms: {early: 2027-03-01, seen: 2027-06-01, "
-            "expiry: 2027-12-01}\n---\nmarket: 2026-12-01\nrates: {EUR: 2%}\nassets:\n"
+            "contract: note\ncurrency: EUR\nunits: 1\nassets: [harbour]\nstart: 2026-12-01\n"
+            "settlement: 0 business days\ncalendar: {holidays: none, roll: following}\npayoff: sample\n"
+            "terms: {early: 2027-03-01, seen: 2027-06-01, expiry: 2027-12-01}\n"
+            "---\nmarket: 2026-12-01\nrates: {EUR: 2%}\nassets:\n"
             "  harbour: {spot: 100, currency: EUR, yield: 0%, vol: 20%}\n")
     if change:
         assert change[0] in text
@@ -426,7 +446,8 @@ def test_readback_and_price_ask_for_the_same_fixings(tmp_path: Path, asset: str,
 
 
 @pytest.mark.parametrize(("stated", "said"), [
-    ("disruption: {lantern: {2027-06-02: 2027-06-03}}", "'lantern' is not observed on 2027-06-02"),
+    ("disruption: {lantern: {2027-06-02: 2027-06-03}}", "'lantern' is not observed on 2027-06-02, so that no "
+     "observation is moved; the nearest observation is on 2027-06-01"),
     ("happened: {hit: {2027-06-02: true}}", "'hit' is not watched all the time in this contract"),
     ("happened: {missed: {2027-06-02: 1}}", "'missed' is not a running value that can be watched all the time"),
     ("adjustments: {quarry: {2027-06-02: 2}}", "'quarry' is not an asset of the contract"),
@@ -492,5 +513,5 @@ def test_hits_of_a_watch_that_has_begun():
     begun = HIT.replace("START", "2026-12-01").replace("---", "happened: {touched: {2027-06-01: false}}\n---")
     one, other = (prepare(text).price(1 << 12, 7) for text in (fresh, begun))
     assert (one.mean, one.error) == (other.mean, other.error)
-    with pytest.raises(AssertionError, match="'touched' came true before the valuation date"):
+    with pytest.raises(AssertionError, match="'touched' has come true already"):
         prepare(begun.replace("2027-06-01: false", "2027-05-31: true"))

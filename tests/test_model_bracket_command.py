@@ -134,6 +134,7 @@ def test_the_verdict(tmp_path, price, holds):
     assert ("inside the model bracket, outside the sampling error" in found["verdict"]) is holds
     assert any("Explained by the model bracket alone" in lead for lead in found["leads"]) is holds
     assert found["gap"]["rest"] is None
+    assert any("sells another" in one for one in bracket["indicative"])
     text = mcx("verify", file, *ASKED).out
     assert "model bracket (apart from sampling and inputs)" in text
 
@@ -232,3 +233,20 @@ def test_every_verb_takes_such_a_market(command):
     verb, *rest = command
     outcome = mcx(verb, EXAMPLE, *rest, *(ASKED if verb == "greeks" else ()), "--json")
     assert (outcome.code, outcome.err) == (0, "")
+
+
+def test_no_reading_closes_what_is_closed():
+    """A gap of one vol that a reading with one vol would close is not open where each strike at its own vol leaves
+    nothing of it."""
+    found = mcx("verify", EXAMPLE, "--paths", 65536, "--seed", 1, "--json").json
+    assert abs(found["gap"]["rest"]) < 2.0 * found["gap"]["standard_error"] < 0.1 * abs(found["gap"]["price"])
+    left = {each["reading"]: each for each in found["readings"]}["knock-in at each close"]
+    assert abs(left["left"]) < 4.0 * found["gap"]["standard_error"]
+    assert not any(each["closes_gap"] for each in found["readings"])
+
+
+def test_what_is_not_in_the_model_fits_what_the_bracket_says():
+    """Of a contract that a strip decides nothing is left open by vols by strike; of another it is."""
+    strip, path = (each["limits"] for each in mcx("price", EXAMPLE, *ASKED, "--json").json["prices"])
+    assert any("the strip" in each for each in strip) and not any("neither more paths" in each for each in strip)
+    assert any("neither more paths" in each for each in path)

@@ -27,6 +27,8 @@ def read_request(
     """The documents of the files and their contracts with every date, all sound; raises InputError, RequestError."""
     if not files:
         raise RequestError("no files are given")
+    if others := [each for each in files if not isinstance(each, File)]:
+        raise RequestError(f"expected the name of a file, one argument for each, found {others[0]!r}")
     documents, unread = read_documents(files)
     made, faults = checked_request(documents, unread)
     kinds = {document.kind for document in made.documents}

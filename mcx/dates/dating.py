@@ -153,7 +153,10 @@ class _Dating:
         for asset, dates in self.contract.disruption.items():
             for date, known in dates.items():
                 if date not in observed:
-                    self._fault(known.place, f"'{asset}' is not observed on {date}, so that no observation is moved")
+                    near = min(observed, key=lambda day: (abs((day - date).days), day), default=None)
+                    hint = f"; the nearest observation is on {near}" if near else ""
+                    self._fault(known.place, f"'{asset}' is not observed on {date}, so that no observation is moved"
+                                             f"{hint}")
         watched = {watch.running.name for watch in self.watches}
         for name, dates in self.contract.happened.items():
             for known in dates.values():

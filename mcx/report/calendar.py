@@ -18,8 +18,9 @@ CERTAIN, OPEN, DOUBTFUL = DOUBTS = ("", " (amount open)", " (if it is due)")  # 
 
 def calendar(contracts: Iterable[tuple[DatedContract, State | None]]) -> CalendarView:
     """Fixings, decisions and payments from the valuation date on, in order of time; of contracts that have ended only
-    what is still owed. A payment is said to be open where its amount follows from levels, and doubtful where a condition
-    or an earlier end may take it away. Without a state nothing is known of the past, and all dates are listed."""
+    what is still owed. A payment is said to be open where its amount follows from levels, and doubtful where a
+    condition or an earlier end may take it away. Without a state nothing is known of the past, and all dates are
+    listed."""
     contracts = list(contracts)
     lines = [line for dated, state in contracts for line in _lines(dated, state)]
     versions = dict.fromkeys(dated.calendar_version for dated, _ in contracts if dated.calendar_version)
@@ -44,7 +45,7 @@ def _lines(dated: DatedContract, state: State | None) -> Iterator[tuple[float, C
     payments: dict[tuple[Day, str], str] = {}
     may_have_ended = any(isinstance(action, End) for hit in dated.hits for action in settled.actions(hit.event))
     for moment in dated.moments:
-        if moment.day.time < 0.0:
+        if moment.day.time < 0.0 or (state is not None and _fixed(moment.day, dated)):
             continue
         if _reads_levels(moment, settled):
             yield line(moment.day, "fixing", joined(contract.assets))
@@ -66,6 +67,13 @@ def _lines(dated: DatedContract, state: State | None) -> Iterator[tuple[float, C
     for watch in dated.watches:
         if watch.end.time >= 0.0:
             yield line(watch.end, "fixing", f"{watch.running.name}: the watch ends")
+
+
+def _fixed(day: Day, dated: DatedContract) -> bool:
+    """Whether the fixings of a day are in, those of the valuation date too: what it decides is decided."""
+    history = dated.history
+    return all(history.level(number, history.observed(number, day)) is not None
+               for number in range(len(dated.contract.assets)))
 
 
 def _hangs_on_levels(action: Pay, settled: Settled) -> bool:

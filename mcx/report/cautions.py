@@ -10,6 +10,7 @@ from mcx.checked.market import Curve, Market, StrikeVols
 from mcx.checked.strike_vols import shown_strike
 from mcx.dates.dated_contract import DatedContract
 from mcx.estimators.estimate import Estimate
+from mcx.estimators.model_bracket import ModelBracket
 from mcx.estimators.price import Valuation
 from mcx.leaves.market_map import MarketMap
 from mcx.leaves.smile import butterflies
@@ -120,12 +121,15 @@ def _ends_before(curve: Curve, time: float) -> bool:
     return not curve.flat and curve.nodes[-1].time < time - 1e-9
 
 
-def limits(dated: DatedContract, model_bracket: bool = False) -> Iterator[str]:
-    """What the model leaves out, as far as it touches this contract; `model_bracket`: vols by strike show how far."""
+def limits(dated: DatedContract, model: ModelBracket | None = None) -> Iterator[str]:
+    """What the model leaves out, as far as it touches this contract; `model` shows how far where vols go by strike."""
     contract, settled = dated.contract, Settled(dated.contract)
     yield ("risk-neutral lognormal levels with one vol for each asset and tenor: no skew, no stochastic vol, no jumps; "
            "rates, yields and dividends are known in advance")
-    if model_bracket:
+    if model is not None and model.exact:
+        yield ("one vol for each asset and tenor cannot do better than the model bracket; the strip, with each payment at "
+               "the vol of its own strike, is what vols by strike say of this contract")
+    elif model is not None:
         yield ("the model bracket is how far vols by strike leave the price open; one vol for each asset and tenor "
                "cannot do better: neither more paths nor better inputs decide what lies inside it")
     elif _turns(settled):

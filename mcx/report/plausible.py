@@ -79,8 +79,8 @@ def _turned_rates(dated: DatedContract, market: MarketMap) -> Iterator[str]:
         spot = rate.spot.value
         for date, fixed in sorted(dated.history.published.get(rate.name, {}).items()):
             if date <= dated.history.valuation and abs(log(fixed * spot)) < abs(log(fixed / spot)) > TURNED:
-                yield (f"{rate.name} was fixed at {figure(fixed)} on {date} and stands at {figure(spot)}: is the fixing "
-                       "the rate the other way round?")
+                yield (f"{rate.name} was fixed at {figure(fixed)} on {date} and stands at {figure(spot)}: is the "
+                       "fixing the rate the other way round?")
                 break
 
 

@@ -79,7 +79,7 @@ def price_result(ready: Ready, market: Market, valuation: Valuation) -> PriceRes
         warnings=(*warnings(valuation, ready.unrolled.tape, martingale, met), *implausible(dated, ready.market),
                   *doubted(dated, ready.unrolled.state, ready.market), *vol_warnings(market, ready.market)),
         assumptions=tuple(dict.fromkeys((*standing(ready), *assumptions(dated, market, ready.market)))),
-        limits=tuple(limits(dated, valuation.model is not None)),
+        limits=tuple(limits(dated, valuation.model)),
         cautions=tuple(cautions(dated, bool(conditions or ends))),
         calendar_version=dated.calendar_version,
     )

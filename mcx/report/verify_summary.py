@@ -102,7 +102,7 @@ def verify_result(ready: Ready, market: Market, found: Verification, solve: str,
                   *vol_warnings(market, ready.market)),
         assumptions=tuple(dict.fromkeys(
             (*standing(ready), *assumptions(dated, market, ready.market), *CONVENTIONS))),
-        limits=tuple(limits(dated, found.model is not None)),
+        limits=tuple(limits(dated, found.model)),
         cautions=tuple(cautions(dated, named=False)),
         calendar_version=dated.calendar_version,
     )

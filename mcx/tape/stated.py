@@ -81,8 +81,10 @@ def against_fixings(state: Watched) -> Iterator[Fault]:
         for date, asset, level in sorted(fixed):
             lines = (Line(asset, op, level) for op in (Op.LOW, Op.HIGH))
             if any(_against(Claim(frozenset({line}), True, date, date, "", None), denied) for line in lines):
+                published = history.published.get(names[asset], {}).get(date, level)
+                counts = "" if published == level else f", which counts as {level:.12g}"
                 yield Fault(denied.place, f"{denied.words}, which fixings contradict: {names[asset]} was fixed at "
-                                          f"{level:.12g} on {date}")
+                                          f"{published:.12g} on {date}{counts}")
                 break
 
 

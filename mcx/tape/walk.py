@@ -32,8 +32,9 @@ from mcx.tape.state import Accruing, FixedAmount, PastEvent, State
 AT_A_HIT = ("shares cannot be delivered at the moment of a hit that is watched continuously: their level on the "
             "delivery date, which depends on that moment, is not known; deliver on a date")
 NO_NUMBER = "'{}' is no number before its last fixing, on {}, and what is watched all the time is held against numbers"
-PAST_HIT = ("'{}' came true before the valuation date, and at which moment is not read, nor what was paid then; a "
-            "contract that has ended needs no price; otherwise watch it on dates, whose fixings tell the day")
+PAST_HIT = ("'{}' has come true already, and at which moment is not read, nor what was paid then or is owed still; "
+            "a contract that has ended and owes nothing needs no price; otherwise watch it on dates, whose fixings "
+            "tell the day")
 
 
 @dataclass(slots=True)
