@@ -18,7 +18,7 @@ from statistics import median
 
 from mcx.checked.load import checked_request
 from mcx.dates.dating import date_contract
-from mcx.estimators.nets import Net, Order, clock, may_end, net_draws, on_net
+from mcx.estimators.nets import Net, Order, may_end, net_draws, on_net
 from mcx.estimators.ready import Ready, prepare
 from mcx.machine.draw_plan import PLAIN, DrawPlan
 from mcx.machine.run import run
@@ -108,12 +108,12 @@ def main() -> None:
     for title, text, vol in CONTRACTS:
         ready = ready_of(f"{text}\n---{MARKET.replace('VOL', str(vol))}", title)
         program = replace(ready.program, outputs=ready.program.outputs[:1])
-        variances, early = clock(ready.market, ready.unrolled.grid), may_end(ready.unrolled.observed)
-        plans = {order: net_draws(Net(POINTS), order, variances, early) for order in Order}
+        how = ready.market, ready.unrolled.grid, may_end(ready.unrolled.observed)
+        plans = {order: net_draws(Net(POINTS), order, *how) for order in Order}
         plain = run(program, seed=SEED, paths=1 << 22, threads=1).variance[0] / POINTS
         for order in Order:
             net = Net(POINTS, SCRAMBLES)
-            means = on_net(program, net, net_draws(net, order, variances, early), seed=SEED, threads=1).means[:, 0]
+            means = on_net(program, net, net_draws(net, order, *how), seed=SEED, threads=1).means[:, 0]
             ratio = plain / means.var(ddof=1)
             cost = median(taken(program, plans[order]) / taken(program, PLAIN) for _ in range(ROUNDS))
             print(f"{title:30} {order.name.lower():12} {cost:6.2f} {ratio:15,.1f} "

@@ -191,6 +191,7 @@ def methods(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
     with _progress() as (_, notice):
         result = api.methods(*files, notice=notice, **wishes)
     _show(result, as_json, _methods_view)
+    _end_if_interrupted(result, None)
 
 
 @cli.command()
@@ -367,10 +368,14 @@ def _methods_view(result: Result, page: Page) -> None:
     from mcx.report.method_results import MethodsTable
     from mcx.report.method_view import show_methods
 
-    for number, each in enumerate(result.contracts if isinstance(result, MethodsTable) else (result,)):
+    several = isinstance(result, MethodsTable)
+    for number, each in enumerate(result.contracts if several else (result,)):
         if number:
             page.line()
         show_methods(each, page)
+    if several and result.not_compared:
+        page.line()
+        page.line(f"interrupted: not compared are {', '.join(result.not_compared)}", style="bold")
 
 
 def _readback_view(result: Result, page: Page) -> None:

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Callable
+from dataclasses import replace
 from pathlib import Path
 from xml.etree import ElementTree
 
@@ -11,6 +13,7 @@ import pytest
 from front_door import CALL, MARKET, SEED, mcx, refused, written
 
 import mcx as package
+from mcx.estimators.reduction.sample import Sampled, Sampler
 
 METHOD_KEYS = {"method", "price", "standard_error", "paths", "seconds", "variance_ratio", "cost_ratio", "efficiency", "z",
                "seconds_to_1bp"}
@@ -135,3 +138,47 @@ def test_a_hedger_is_told_what_is_left(average: Path):
     assert left == sorted(left, reverse=True) and left[-1] < 0.5 * left[0]
     assert abs(found.price - plain.price) < 4 * plain.standard_error
     assert "what a hedger is left with" in mcx("price", average, "--paths", 5000, "--reduction", "hedge").out
+
+
+@pytest.fixture
+def pressed(monkeypatch: pytest.MonkeyPatch) -> Callable[[str], None]:
+    """Has an interruption come in the first run of the choice of these methods: half of its paths are there then."""
+
+    def at(label: str) -> None:
+        sample = Sampler.sample
+
+        def cut(sampler: Sampler, wanted: int, **how: object) -> Sampled:
+            found = sample(sampler, wanted, **how)
+            return replace(found, interrupted=sampler.scheme.label == label)
+
+        monkeypatch.setattr(Sampler, "sample", cut)
+
+    return at
+
+
+def test_an_interruption_leaves_the_choices_so_far(average: Path, pressed: Callable):
+    """Those that were whole, none of half its paths; what is missing is named, and the exit code is 130."""
+    pressed("sobol-components")
+    outcome = mcx("methods", average, "--paths", 4096, "--json")
+    assert outcome.code == 130 and outcome.json["interrupted"]
+    assert {line["method"] for line in outcome.json["methods"]} == {"none", "sobol-bridge"}
+    (said,) = [caution for caution in outcome.json["cautions"] if caution.startswith("interrupted")]
+    assert said.startswith("interrupted: not compared are sobol-components, controls,") and "controls + hedge" in said
+    assert "interrupted: not compared are sobol-components" in mcx("methods", average, "--paths", 4096).out
+
+
+def test_an_interruption_before_the_first_choice(average: Path, pressed: Callable):
+    pressed("none")
+    outcome = mcx("methods", average, "--paths", 4096)
+    assert (outcome.code, outcome.out, outcome.err.strip()) == (130, "", "interrupted before there was an estimate")
+
+
+def test_an_interruption_between_contracts(average: Path, tmp_path: Path, pressed: Callable):
+    """The contract that was reached, and the title of the other."""
+    (tmp_path / "two").mkdir()
+    both = written(tmp_path / "two", AVERAGE + "---\n" + AVERAGE.replace("Average\n", "Another\n") + MARKET)
+    pressed("antithetic")
+    outcome = mcx("methods", both, "--paths", 4096, "--json")
+    assert outcome.code == 130 and outcome.json["not_compared"] == ["Another"]
+    assert [each["contract"] for each in outcome.json["contracts"]] == ["Average"]
+    assert mcx("methods", both, "--paths", 4096).out.rstrip().endswith("interrupted: not compared are Another")

@@ -27,8 +27,9 @@ def methods(
     """Which variance reduction pays on every contract in the files: one result, or a table of several.
 
     Every choice of methods that applies runs for `seconds` (1 without), or for `paths`. `report` names a file for a page
-    of HTML, `picture` one (.png or .svg) for its picture, the error against time, of one contract. Raises InputError,
-    RequestError, Refusal.
+    of HTML, `picture` one (.png or .svg) for its picture, the error against time, of one contract. After an
+    interruption the choices and contracts so far. Raises InputError, RequestError, Refusal, and KeyboardInterrupt if
+    that comes before there is an estimate.
     """
     asked_for_none = paths is None and seconds is None
     sampling = sampling_of(paths, None, METHOD_SECONDS if asked_for_none else seconds, seed)
@@ -45,9 +46,17 @@ def methods(
     contracts = made_ready(made, dated)
     asked, results = sampling.precision, []
     for ready in contracts:
-        with finite(ready):
-            case = Case(ready, sampling.seed, means.threads, means.notice)
-            found, refused = compare(case, asked.seconds, asked.paths)
-        results.append(methods_result(ready, made.market, found, refused, sampling.seed, asked.words))
-    write_outputs("methods", files, made, contracts, results, wanted)
-    return results[0] if len(results) == 1 else MethodsTable(tuple(results))
+        try:
+            with finite(ready):
+                case = Case(ready, sampling.seed, means.threads, means.notice)
+                compared = compare(case, asked.seconds, asked.paths)
+        except KeyboardInterrupt:
+            if not results:
+                raise
+            break
+        results.append(methods_result(ready, made.market, compared, sampling.seed, asked.words))
+        if compared.not_reached:
+            break
+    write_outputs("methods", files, made, contracts[: len(results)], results, wanted)
+    left_out = tuple(each.contract.title for each in dated[len(results):])
+    return results[0] if len(dated) == 1 else MethodsTable(tuple(results), left_out)

@@ -67,17 +67,30 @@ def clock(market: MarketMap, grid: Grid) -> np.ndarray:
     return market.values(leaves).reshape(len(grid.times) - 1, len(grid.assets))
 
 
+def moves(market: MarketMap, grid: Grid) -> np.ndarray:
+    """What each step's normals do to the logs of what is simulated, shape (steps, assets, assets)."""
+    steps, assets = len(grid.times) - 1, len(grid.assets)
+    where = [(step, row, column) for step in range(steps) for row in range(assets) for column in range(row + 1)]
+    leaves = [Leaf(LeafKind.FACTOR, grid.assets[row], grid.assets[column], grid.times[step], grid.times[step + 1])
+              for step, row, column in where]
+    found = np.zeros((steps, assets, assets))
+    found[tuple(np.transpose(where))] = market.values(leaves)
+    return found
+
+
 def may_end(observed: Tape) -> bool:
     """Whether a contract, as the tape that reads its levels, may end on one of its dates."""
     return any(output.kind == "end" for output in observed.outputs)
 
 
-def net_draws(net: Net, order: Order, variances: np.ndarray, early: bool = False) -> DrawPlan:
-    """The plan of draws for a net on a contract whose `clock` is given; `early`: a bridge has the early dates early, as
-    a contract that may end on them wants it."""
-    orders = {Order.BRIDGE: early_bridge if early else bridge, Order.COMPONENTS: components}
-    mixed = order in orders and variances.size > 0
-    return DrawPlan(net.scrambles, order=orders[order](variances) if mixed else None)
+def net_draws(net: Net, order: Order, market: MarketMap, grid: Grid, early: bool = False) -> DrawPlan:
+    """The plan of draws for a net on a contract with this grid; `early`: a bridge has the early dates early, as a
+    contract that may end on them wants it."""
+    if order is Order.STEPS or len(grid.times) < 2 or not grid.assets:
+        return DrawPlan(net.scrambles)
+    if order is Order.COMPONENTS:
+        return DrawPlan(net.scrambles, order=components(moves(market, grid)))
+    return DrawPlan(net.scrambles, order=(early_bridge if early else bridge)(clock(market, grid)))
 
 
 def on_net(

@@ -112,7 +112,7 @@ def sampled(ready: Ready, scheme: Scheme, asked: Precision, *, seed: int, thread
 
     def seconds_for(paths: int) -> float:
         begun = time.perf_counter()
-        sampler.sample(paths, stream=Stream.PILOT)
+        sampler.pilot(paths)
         return time.perf_counter() - begun
 
     speed = pace([scheme.program], threads) / scheme.each
@@ -139,7 +139,7 @@ def _refined(ready: Ready, asked: Precision, seed: int, threads: int | None, pie
 
     def seconds_for(paths: int) -> float:
         begun = time.perf_counter()
-        sampler.sample(paths, stream=Stream.PILOT)
+        sampler.pilot(paths)
         return time.perf_counter() - begun
 
     planned = plan(asked, sampler.independent, seconds_for, exact=program.outputs[0] < 0)

@@ -20,17 +20,28 @@ of steps, as that of all components would, and more of them reduce no error: on 
 points the variance ratio is 91,000, 89,000, 71,000 and 75,000 with 4, 8, 16 and all components, each +- 18 %; with 1
 and 2 it is 68,000 and 99,000. All of 52 components would take some 2,700 multiplications a path, which is more than the
 rest of that path.
+
+Of several assets the components are those of all paths together. In every step the leading principal directions of
+what the assets do in all become normals of their own, by turns of the step's normals; along each the path has
+components in time as one asset's has. Where the steps' covariances are multiples of one another these are
+the principal components of the whole.
 """
 
 from __future__ import annotations
 
+import math
+from dataclasses import replace
 from heapq import heappop, heappush
+from itertools import combinations
 
 import numpy as np
 
 from mcx.machine.draw_plan import LEADING, PathOrder
 
 EARLY = 3.0  # the root of the variance that an early bridge halves
+STRAIGHT = 1e-12  # a share of a move's size that needs no turn
+STILL = 1e-9  # of the widest direction's variance: a direction narrower than that is left as it is
+SWEEPS = 30  # over all pairs of axes; some 6 are needed
 COMPONENT_STEPS = 512  # beyond, the eigenvectors take longer to find than many a run
 
 
@@ -44,9 +55,65 @@ def early_bridge(clock: np.ndarray) -> PathOrder:
     return _order(clock, components=False, root=EARLY)
 
 
-def components(clock: np.ndarray) -> PathOrder:
-    """The order of principal components, of at most COMPONENT_STEPS steps; that of a bridge beyond. See `bridge`."""
-    return _order(clock, components=1 < len(clock) <= COMPONENT_STEPS)
+def components(moves: np.ndarray) -> PathOrder:
+    """The order of principal components, of at most COMPONENT_STEPS steps, of bridges along the principal directions
+    beyond; moves (steps, assets, assets): of each step the matrix that takes its normals to the moves of the logs."""
+    pairs, turns, clock = _along_directions(moves)
+    found = _order(clock, components=1 < len(clock) <= COMPONENT_STEPS)
+    steps, assets = clock.shape
+    shares = clock.sum(axis=0) / (2.0 * np.arange(steps)[:, None] + 1.0) ** 2  # by component in time, for even steps
+    ranks = np.empty(steps * assets, dtype=np.int32)
+    ranks[sorted(range(steps * assets), key=lambda k: -float(f"{shares.flat[k]:.9e}"))] = np.arange(steps * assets)
+    return replace(found, coordinates=ranks[found.coordinates], pairs=np.concatenate([found.pairs, pairs]),
+                   turns=np.concatenate([found.turns, turns]))
+
+
+def _along_directions(moves: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """The turns (pairs, and their roots) after which the first normals along the principal directions of all moves
+    together stand in the places of assets, and the variance that each place then adds in each step, (steps, assets).
+
+    Only LEADING directions are followed, so that the turns grow with the assets and not with their square.
+    """
+    steps, assets = len(moves), moves.shape[1]
+    sizes, directions = _principal(np.einsum("tik,tjk->ij", moves, moves))
+    leading = sorted(range(assets), key=lambda k: -float(f"{sizes[k]:.9e}"))[:LEADING]
+    leading = [place for place in leading if sizes[place] > STILL * sizes[leading[0]]]
+    pairs, turns, clock = [], [], np.empty((steps, assets))
+    for step in range(steps):
+        left = directions.T @ moves[step]  # (directions, normals)
+        made, open_places = [], list(range(assets))
+        for place in leading:
+            open_places.remove(place)
+            for other in open_places:
+                across = float(left[place, other])
+                size = math.hypot(float(left[place, place]), across)
+                if abs(across) > STRAIGHT * size:
+                    c, s = float(left[place, place]) / size, across / size
+                    one, two = left[:, place].copy(), left[:, other].copy()
+                    left[:, place], left[:, other] = c * one + s * two, s * one - c * two
+                    made.append(((step * assets + place, step * assets + other), (c, s)))
+        clock[step] = (left**2).sum(axis=0)
+        pairs += [pair for pair, _ in reversed(made)]  # the last made is what the normals along directions meet first
+        turns += [turn for _, turn in reversed(made)]
+    return np.array(pairs, dtype=np.int32).reshape(-1, 2), np.array(turns).reshape(-1, 2), clock
+
+
+def _principal(covariance: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Eigenvalues and eigenvectors (columns), by turns of two axes at a time (C. Jacobi, 1846), each vector next to the
+    axis it came from: where values are equal, as of assets that are all alike, a library may take any axes."""
+    rest, vectors = covariance.copy(), np.eye(len(covariance))
+    scale = np.sqrt(np.maximum(np.diag(covariance), 0.0))
+    for _ in range(SWEEPS):
+        off = [(i, j) for i, j in combinations(range(len(rest)), 2) if abs(rest[i, j]) > STRAIGHT * scale[i] * scale[j]]
+        for i, j in off:
+            angle = 0.5 * math.atan2(2.0 * rest[i, j], rest[i, i] - rest[j, j])
+            angle -= math.copysign(0.5 * math.pi, angle) if abs(angle) > 0.25 * math.pi else 0.0
+            c, s = math.cos(angle), math.sin(angle)
+            for each in (rest.T, rest, vectors.T):
+                each[i], each[j] = c * each[i] + s * each[j], c * each[j] - s * each[i]
+        if not off:
+            break
+    return np.diag(rest).copy(), np.round(vectors, 10)  # as in `_leading`: turns are made orthogonal all the same
 
 
 def _order(clock: np.ndarray, components: bool, root: float = 1.0) -> PathOrder:

@@ -77,14 +77,20 @@ class MethodsResult(Result):
     assumptions: tuple[str, ...]
     limits: tuple[str, ...]
     cautions: tuple[str, ...]
+    interrupted: bool
     calendar_version: str
 
 
 @dataclass(frozen=True, slots=True)
 class MethodsTable(Result):
-    """Several contracts."""
+    """Several contracts; after an interruption `not_compared` are the titles of those that were not reached."""
 
     contracts: tuple[MethodsResult, ...]
+    not_compared: tuple[str, ...] = ()
+
+    @property
+    def interrupted(self) -> bool:
+        return bool(self.not_compared) or any(each.interrupted for each in self.contracts)
 
     def rows(self) -> list[dict]:
         """The choices of all contracts."""

@@ -3,11 +3,11 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Iterator
 
 from mcx.checked.market import Market
 from mcx.estimators.ready import Ready
-from mcx.estimators.reduction.comparison import Compared, closed_form, z_scores
+from mcx.estimators.reduction.comparison import Compared, Comparison, closed_form, z_scores
 from mcx.report.cautions import assumptions, cautions, limits
 from mcx.report.method_results import Convergence, MethodLine, MethodsResult, NotApplied
 from mcx.report.state import standing
@@ -15,10 +15,9 @@ from mcx.report.state import standing
 BASIS_POINT = 1e-4
 
 
-def methods_result(ready: Ready, market: Market, found: Sequence[Compared], refused: Sequence[tuple[str, str]],
-                   seed: int, each: str) -> MethodsResult:
+def methods_result(ready: Ready, market: Market, compared: Comparison, seed: int, each: str) -> MethodsResult:
     """Every choice, the most efficient first; an exact one before all."""
-    contract = ready.dated.contract
+    contract, found = ready.dated.contract, compared.found
     truth = closed_form(found)
     plain = found[0]
     unit = BASIS_POINT * (1.0 if contract.notional is not None else abs(plain.price.value))
@@ -34,12 +33,18 @@ def methods_result(ready: Ready, market: Market, found: Sequence[Compared], refu
         each=each,
         closed_form=truth,
         methods=tuple(lines),
-        not_applied=tuple(NotApplied(*one) for one in refused),
+        not_applied=tuple(NotApplied(*one) for one in compared.refused),
         assumptions=tuple(dict.fromkeys((*standing(ready), *assumptions(ready.dated, market, ready.market)))),
         limits=tuple(limits(ready.dated)),
-        cautions=tuple(cautions(ready.dated, named=False)),
+        cautions=(*_missing(compared.not_reached), *cautions(ready.dated, named=False)),
+        interrupted=bool(compared.not_reached),
         calendar_version=ready.dated.calendar_version,
     )
+
+
+def _missing(not_reached: tuple[str, ...]) -> Iterator[str]:
+    if not_reached:
+        yield f"interrupted: not compared are {', '.join(each.replace(',', ' + ') for each in not_reached)}"
 
 
 def _line(one: Compared, plain: Compared, z: float, truth: float | None, unit: float) -> MethodLine:

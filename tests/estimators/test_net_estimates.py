@@ -21,8 +21,10 @@ from mcx.estimators.estimate import Estimate, estimates
 from mcx.estimators.nets import SCRAMBLES, Net, Order, clock, net_draws, net_estimates, net_for, on_net
 from mcx.faults import RequestError
 from mcx.leaves.market_map import MarketMap
+from mcx.machine.draw_plan import DrawPlan
 from mcx.machine.run import ScrambleSums
 from mcx.tape.program import Program
+from mcx.tape.steps import Grid
 
 SEED = 0x510E527FADE682D1
 EXAMPLES = sorted((Path(__file__).resolve().parents[2] / "payoffs" / "examples").glob("*.yaml"))
@@ -33,14 +35,19 @@ def variances(ready: Ready) -> np.ndarray:
     return clock(MarketMap(ready.market, ready.dated.contract), ready.unrolled.grid)
 
 
+def laid_out(ready: Ready) -> tuple[MarketMap, Grid]:
+    """What the plan of draws of a contract hangs on."""
+    return MarketMap(ready.market, ready.dated.contract), ready.unrolled.grid
+
+
 def price_only(ready: Ready) -> Program:
     """The program without the other outputs."""
     return replace(ready.program, outputs=ready.program.outputs[[ready.names.index("price")]])
 
 
-def on_points(program: Program, clocked: np.ndarray, net: Net, order: Order, seed: int) -> tuple[Estimate, ...]:
+def on_points(program: Program, how: tuple[MarketMap, Grid], net: Net, order: Order, seed: int) -> tuple[Estimate, ...]:
     """The estimates of a program over a net."""
-    return net_estimates(on_net(program, net, net_draws(net, order, clocked), seed=seed))
+    return net_estimates(on_net(program, net, net_draws(net, order, *how), seed=seed))
 
 
 @pytest.mark.parametrize(("name", "order"), [*((name, Order.BRIDGE) for name in KNOWN),
@@ -49,9 +56,9 @@ def test_intervals_cover(name: str, order: Order):
     """32 scrambles of 128 points: intervals cover, and the runs together are unbiased."""
     known = KNOWN[name]
     ready = known.ready()
-    program, clocked = price_only(ready), variances(ready)
+    program, how = price_only(ready), laid_out(ready)
     seeds = np.random.default_rng(SEED).integers(1, 2**63, RUNS)
-    found = [on_points(program, clocked, Net(128), order, int(seed))[0] for seed in seeds]
+    found = [on_points(program, how, Net(128), order, int(seed))[0] for seed in seeds]
     hits = [low <= known.truth <= high for low, high in (estimate.interval95 for estimate in found)]
     assert 0.92 <= np.mean(hits) <= 0.98
     error = sqrt(sum(estimate.standard_error**2 for estimate in found)) / RUNS
@@ -66,7 +73,7 @@ def test_every_output_of_every_example_is_unbiased(example: Path, order: Order):
     request, net = load([example]), Net(256)
     for number in range(len(request.contracts)):
         ready = ready_of(request, number)
-        found = on_points(ready.program, variances(ready), net, order, SEED)
+        found = on_points(ready.program, laid_out(ready), net, order, SEED)
         plain = ready.estimates(1 << 15, SEED)
         for name, estimate in zip(ready.names, found, strict=True):
             error = sqrt(estimate.standard_error**2 + plain[name].error ** 2)
@@ -80,11 +87,11 @@ def test_errors_shrink_faster_than_for_random_numbers(order: Order):
     square error of a scramble falls with a power of the points steeper than -0.75, plain sampling's being -0.5."""
     known = KNOWN["geometric average"]
     ready = known.ready()
-    program, clocked, sizes = price_only(ready), variances(ready), 1 << np.arange(6, 14)
+    program, how, sizes = price_only(ready), laid_out(ready), 1 << np.arange(6, 14)
     errors = []
     for points in sizes.tolist():
         net = Net(points, 48)
-        means = on_net(program, net, net_draws(net, order, clocked), seed=SEED).means[:, 0]
+        means = on_net(program, net, net_draws(net, order, *how), seed=SEED).means[:, 0]
         errors.append(np.sqrt(np.mean((means - known.truth) ** 2)))
     assert np.polyfit(np.log(sizes), np.log(errors), 1)[0] < -0.75
     check(estimate_of(means), known.truth)
@@ -136,7 +143,7 @@ def test_more_draws_than_coordinates_are_refused():
     """Before anything is drawn."""
     made = Program(np.empty((0, 6), np.int32), np.empty(0), np.zeros(1, np.int32), 21202, 0, 21202)
     with pytest.raises(RequestError, match="draws 21,202 numbers .* at most 21,201 coordinates"):
-        on_net(made, Net(64), net_draws(Net(64), Order.STEPS, np.empty((0, 0))), seed=SEED)
+        on_net(made, Net(64), DrawPlan(64), seed=SEED)
 
 
 def test_the_clock_is_the_variance_of_each_step():

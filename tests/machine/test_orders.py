@@ -23,6 +23,11 @@ CLOCKS = {
 }
 
 
+def by_components(clock: np.ndarray) -> PathOrder:
+    """That of principal components, of assets that know nothing of one another."""
+    return components(np.sqrt(clock)[:, :, None] * np.eye(clock.shape[1]))
+
+
 def matrix(order: PathOrder, normals: int) -> np.ndarray:
     """The order as the matrix that takes the coordinates' normals to the tape's, by what its fields say."""
     z = np.eye(normals)[order.coordinates]
@@ -34,7 +39,7 @@ def matrix(order: PathOrder, normals: int) -> np.ndarray:
     return z
 
 
-@pytest.mark.parametrize("order", [bridge, early_bridge, components])
+@pytest.mark.parametrize("order", [bridge, early_bridge, by_components])
 @pytest.mark.parametrize("name", CLOCKS)
 def test_an_order_is_orthogonal(name: str, order: Callable):
     """Independent standard normals stay so, whatever the clock, also where an asset stands still."""
@@ -43,7 +48,7 @@ def test_an_order_is_orthogonal(name: str, order: Callable):
     np.testing.assert_allclose(found @ found.T, np.eye(clock.size), atol=1e-14)
 
 
-@pytest.mark.parametrize("order", [bridge, early_bridge, components])
+@pytest.mark.parametrize("order", [bridge, early_bridge, by_components])
 @pytest.mark.parametrize("name", CLOCKS)
 def test_the_kernel_mixes_as_the_matrix_says(name: str, order: Callable):
     """Normals in an order are the matrix times those of the same points without one, in every lane of several groups."""
@@ -97,11 +102,12 @@ def test_components_are_the_principal_ones(name: str):
     """The first coordinates move the path along the leading eigenvectors of its covariance, as far as these say."""
     clock = CLOCKS[name]
     steps, assets = clock.shape
-    found = matrix(components(clock), clock.size)
+    found = matrix(by_components(clock), clock.size)
     for asset in range(assets):
         times = np.cumsum(clock[:, asset])
         values, vectors = np.linalg.eigh(np.minimum.outer(times, times))
-        path = np.cumsum(np.sqrt(clock[:, [asset]]) * found[asset::assets, asset::assets], axis=0)
+        own = found[asset::assets]
+        path = np.cumsum(np.sqrt(clock[:, [asset]]) * own[:, np.any(own != 0.0, axis=0)], axis=0)
         for k in range(min(LEADING, steps)):
             expected = np.sqrt(values[-1 - k]) * vectors[:, -1 - k]
             sign = np.sign(path[-1, k] * expected[-1])
@@ -118,5 +124,69 @@ def test_four_components_are_most_of_a_path():
 def test_very_long_paths_take_the_bridge():
     """Beyond the limit both orders are the same."""
     clock = np.full((COMPONENT_STEPS + 1, 1), 1e-4)
-    assert not components(clock).left.size
-    np.testing.assert_array_equal(components(clock).coordinates, bridge(clock).coordinates)
+    assert not by_components(clock).left.size
+    np.testing.assert_array_equal(by_components(clock).coordinates, bridge(clock).coordinates)
+
+
+def moves_of(correlation: np.ndarray, vols: np.ndarray, steps: int) -> np.ndarray:
+    """What the normals of even steps do, (steps, assets, assets)."""
+    spread = np.zeros((len(vols), len(vols)))
+    values, vectors = np.linalg.eigh(correlation)
+    root = np.linalg.qr((vectors * np.sqrt(np.maximum(values, 0.0))).T)[1].T  # lower triangular, also where singular
+    spread[:] = vols[:, None] * root
+    return np.repeat(spread[None], steps, axis=0) / np.sqrt(steps)
+
+
+ALIKE = np.full((5, 5), 0.6) + 0.4 * np.eye(5)
+LINKED = {
+    "alike": moves_of(ALIKE, np.full(5, 0.2), 12),
+    "unlike": moves_of(np.corrcoef(RNG.normal(size=(4, 8))), np.array([0.1, 0.2, 0.3, 0.4]), 9),
+    "seven, of which four lead": moves_of(np.corrcoef(RNG.normal(size=(7, 9))), RNG.uniform(0.1, 0.4, 7), 3),
+    "as one": moves_of(np.ones((3, 3)), np.array([0.2, 0.3, 0.1]), 4),
+    "one stands still": moves_of(ALIKE[:3, :3], np.array([0.2, 0.0, 0.1]), 4),
+    "over curves": np.linalg.cholesky(np.stack([np.cov(RNG.normal(size=(3, 6))) for _ in range(6)])),
+    "one date": moves_of(ALIKE, np.full(5, 0.2), 1),
+}
+
+
+@pytest.mark.parametrize("name", LINKED)
+def test_components_of_several_assets_are_orthogonal(name: str):
+    moves = LINKED[name]
+    found = matrix(components(moves), len(moves) * moves.shape[1])
+    np.testing.assert_allclose(found @ found.T, np.eye(len(found)), atol=1e-14)
+
+
+@pytest.mark.parametrize("name", ["alike", "unlike", "seven, of which four lead", "as one", "one date"])
+def test_the_first_components_of_several_assets_are_those_of_all_paths_together(name: str):
+    """Where all steps are alike: the leading eigenvectors of the covariance of all assets at all dates, by numpy; each
+    coordinate moves the paths along one, and the first adds the largest eigenvalue."""
+    moves = LINKED[name]
+    steps, assets = moves.shape[:2]
+    found = matrix(components(moves), steps * assets).reshape(steps, assets, -1)
+    paths = np.cumsum(np.einsum("tij,tjk->tik", moves, found), axis=0).reshape(steps * assets, -1)
+    covariance = np.kron(np.minimum.outer(np.arange(steps) + 1.0, np.arange(steps) + 1.0), moves[0] @ moves[0].T)
+    values = np.linalg.eigvalsh(covariance)[::-1]
+    sizes = (paths**2).sum(axis=0)
+    np.testing.assert_allclose(covariance @ paths[:, 0], values[0] * paths[:, 0], atol=1e-8 * values[0])
+    assert sizes[0] == pytest.approx(values[0], rel=1e-8)
+    leading = min(LEADING, steps) if assets > LEADING else min(LEADING, steps * assets)
+    assert np.sort(sizes)[::-1][: min(leading, 2)] == pytest.approx(values[: min(leading, 2)], rel=1e-6, abs=1e-12)
+
+
+@pytest.mark.parametrize("name", LINKED)
+def test_the_kernel_mixes_several_assets_as_the_matrix_says(name: str):
+    moves = LINKED[name]
+    normals = len(moves) * moves.shape[1]
+    made = program([], rows=normals, outputs=[0], normals=normals)
+    plain, mixed = (draws(made, seed=SEED, numbers=range(70), plan=DrawPlan(1, order))
+                    for order in (None, components(moves)))
+    np.testing.assert_allclose(mixed, plain @ matrix(components(moves), normals).T, rtol=0.0, atol=1e-13)
+
+
+def test_directions_that_assets_share_hang_on_no_library():
+    """Assets that are all alike: every way to part what the average leaves is as good, and the turns are the same in
+    every step, one less for each direction that has its place."""
+    order = components(LINKED["alike"])
+    across = order.pairs[len(order.pairs) - 12 * (4 + 3 + 2 + 1):].reshape(12, -1, 2)
+    np.testing.assert_array_equal(across - 5 * np.arange(12)[:, None, None], np.repeat(across[:1], 12, axis=0))
+    assert len(order.pairs) == 5 * 11 + 12 * 10

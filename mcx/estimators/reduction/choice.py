@@ -34,6 +34,7 @@ CHOICES: tuple[tuple[str, ...], ...] = (  # first what needs no other tape, then
     ("importance",),
     ("controls", "importance"),
 )
+EXACT = 1e-20  # of plain sampling's variance times cost: what is left is rounding, which must decide nothing
 MARGIN = 1.1  # plain sampling is left only for what is clearly better
 MOST_PATHS, FEWEST_PATHS = 1 << 13, 1 << 11  # of a trial
 SECOND = 2e9  # of plain sampling on one core, by the table, which was made on narrower vectors
@@ -145,7 +146,7 @@ def _found(trials: list[Trial]) -> Trial:
     """The best of the trials: plain sampling, the first, unless another is clearly better."""
     plain = trials[0]
     known = [trial for trial in trials if not trial.few]
-    found = min(known, key=lambda trial: trial.burden, default=plain)
+    found = min(known, key=lambda trial: max(trial.burden, EXACT * plain.burden), default=plain)  # the first of equals
     return plain if not plain.few and found.burden * MARGIN > plain.burden else found
 
 
@@ -159,7 +160,7 @@ def _noted(trials: list[Trial], paths: int, untried: list[str]) -> Scheme:
     else:
         if plain.few:
             gain = "plain sampling sees too little of what is paid"
-        elif found.burden == 0.0:
+        elif found.burden <= EXACT * plain.burden:
             gain = "exact"
         else:
             gain = f"plain sampling has {plain.burden / found.burden:.3g} times the variance times cost"

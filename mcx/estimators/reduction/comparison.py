@@ -59,23 +59,36 @@ class Compared:
         return self.price.standard_error <= EXACT * abs(self.price.value)
 
 
-def compare(case: Case, seconds: float | None, paths: int | None) -> tuple[list[Compared], list[tuple[str, str]]]:
-    """Every choice that applies, plain sampling first, and the names of the others with the reason."""
+@dataclass(frozen=True, slots=True)
+class Comparison:
+    """The choices that apply, plain sampling first, the names of the others with the reason, and those that an
+    interruption left out."""
+
+    found: tuple[Compared, ...]
+    refused: tuple[tuple[str, str], ...]
+    not_reached: tuple[str, ...] = ()
+
+
+def compare(case: Case, seconds: float | None, paths: int | None) -> Comparison:
+    """Every choice; after an interruption those that were whole by then. Raises KeyboardInterrupt where none was."""
     found, refused, fitted = [], [], {}
     plain = Sampler(scheme_of(case, ()), case.seed, case.threads, case.notice)
-    plain.sample(FIRST_PILOT)  # compiles, starts threads
-    for names in COMPARED:
+    plain.pilot(FIRST_PILOT)  # compiles, starts threads
+    for number, names in enumerate(COMPARED):
         try:
-            scheme = scheme_of(case, names, fitted)
+            sampler = Sampler(scheme_of(case, names, fitted), case.seed, case.threads, case.notice)
+            if paths is not None and paths < sampler.fewest:
+                few = f"it takes {sampler.fewest:,} paths or more, and {paths:,} were asked for"
+                refused.append((",".join(names), few))
+            else:
+                found.append(_run(sampler, plain, seconds, paths))
         except Refusal as reason:
             refused.append((",".join(names), str(reason).partition(", since ")[2]))
-            continue
-        sampler = Sampler(scheme, case.seed, case.threads, case.notice)
-        if paths is not None and paths < sampler.fewest:
-            refused.append((",".join(names), f"it takes {sampler.fewest:,} paths or more, and {paths:,} were asked for"))
-            continue
-        found.append(_run(sampler, plain, seconds, paths))
-    return found, refused
+        except KeyboardInterrupt:
+            if not found:
+                raise
+            return Comparison(tuple(found), tuple(refused), tuple(map(",".join, COMPARED[number:])))
+    return Comparison(tuple(found), tuple(refused))
 
 
 def _run(sampler: Sampler, plain: Sampler, seconds: float | None, paths: int | None) -> Compared:
@@ -88,7 +101,7 @@ def _run(sampler: Sampler, plain: Sampler, seconds: float | None, paths: int | N
         taken = []
         for _ in range(1 if size == sampler.paths(paths) else REPEATED):
             begun = time.perf_counter()
-            (price,) = sampler.sample(size, first_output_only=True).results
+            (price,) = sampler.pilot(size, stream=Stream.MAIN, first_output_only=True).results
             taken.append(time.perf_counter() - begun)
         points.append(Point(size, min(taken), price.standard_error))
     cost = _cost(sampler, plain, max(paths // SHORTER[1], FIRST_PILOT)) if scheme.names else 1.0
@@ -101,7 +114,7 @@ def _cost(sampler: Sampler, plain: Sampler, paths: int) -> float:
 
     def each(one: Sampler) -> float:
         begun = time.process_time()
-        (price,) = one.sample(paths, first_output_only=True).results
+        (price,) = one.pilot(paths, first_output_only=True).results
         return (time.process_time() - begun) / price.paths
 
     return median(each(sampler) / each(plain) for _ in range(PAIRS))
@@ -112,7 +125,7 @@ def _paths_for(sampler: Sampler, seconds: float) -> int:
     paths, taken = FIRST_PILOT, 0.0
     for _ in range(12):
         begun = time.perf_counter()
-        sampler.sample(paths, stream=Stream.PILOT, first_output_only=True)
+        sampler.pilot(paths, first_output_only=True)
         taken = time.perf_counter() - begun
         if taken > 0.1 * seconds:
             break

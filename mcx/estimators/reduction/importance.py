@@ -17,6 +17,7 @@ from dataclasses import replace
 import numpy as np
 
 from mcx.estimators.nets import clock
+from mcx.estimators.reduction.fit import CONTROLLED
 from mcx.estimators.reduction.scheme import Case, Control, Draft, Inapplicable, Method, Stage
 from mcx.tape.adjoint import by_normals
 from mcx.tape.builder import Builder
@@ -51,10 +52,13 @@ def change(case: Case, draft: Draft) -> Draft:
 
 
 def shifted(tape: Tape, shift: np.ndarray) -> tuple[Tape, int]:
-    """The tape on normals moved by shift (normals,), its outputs times the weight, and the weight's value."""
+    """The tape on normals moved by shift (normals,), its outputs times the weight, and the weight's value. What no draw
+    decides, such as the life of a note that cannot end early, needs no weight; legs keep theirs, as their sum does."""
     builder = Builder()
     made: list[int] = []
+    drawn: list[bool] = []
     for step in tape.instructions:
+        drawn.append(step.op in (Op.NORMAL, Op.UNIFORM) or any(drawn[k] for k in step.operands))
         operands = tuple(made[k] for k in step.operands)
         normal = tape.instructions[step.operands[2]] if step.op is Op.STEP else None
         if normal is not None and normal.op is Op.NORMAL:
@@ -73,6 +77,7 @@ def shifted(tape: Tape, shift: np.ndarray) -> tuple[Tape, int]:
             exponent = builder.emit(Op.STEP, exponent, builder.constant(-size), builder.input(Op.NORMAL, dimension))
     weight = builder.emit(Op.EXP, exponent)
     outputs = [replace(output, value=builder.emit(Op.MUL, made[output.value], weight), flag=False)
+               if drawn[output.value] or output.kind in CONTROLLED else output.at(made[output.value])
                for output in tape.outputs]
     return builder.tape(outputs, tape.normals, tape.uniforms), weight
 

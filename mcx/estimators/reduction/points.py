@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import replace
 
-from mcx.estimators.nets import SCRAMBLES, Net, Order, clock, may_end, net_draws
+from mcx.estimators.nets import SCRAMBLES, Net, Order, may_end, net_draws
 from mcx.estimators.reduction.scheme import Case, Draft, Inapplicable, Method, Stage
 from mcx.machine.directions import most_coordinates
 
@@ -19,9 +19,9 @@ def _on(order: Order):
         if draws > most_coordinates():
             raise Inapplicable(f"a path draws {draws:,} numbers, and scrambled points have at most "
                                f"{most_coordinates():,} coordinates")
-        variances = clock(case.ready.market, case.ready.unrolled.grid)
-        early = may_end(case.ready.unrolled.observed)
-        return replace(draft, plan=net_draws(Net(1, SCRAMBLES), order, variances, early))
+        ready = case.ready
+        plan = net_draws(Net(1, SCRAMBLES), order, ready.market, ready.unrolled.grid, may_end(ready.unrolled.observed))
+        return replace(draft, plan=plan)
 
     return change
 

@@ -74,6 +74,13 @@ class Sampler:
         return Sampled(*(tuple(replace(each, paths=each.paths * scheme.each) for each in part)
                          for part in (found.results, found.stages)), found.interrupted)
 
+    def pilot(self, wanted: int, *, stream: int = Stream.PILOT, first_output_only: bool = False) -> Sampled:
+        """As `sample`, where a part of the paths is of no use: raises KeyboardInterrupt wherever that comes."""
+        found = self.sample(wanted, stream=stream, first_output_only=first_output_only)
+        if found.interrupted:
+            raise KeyboardInterrupt
+        return found
+
     def _net(self, program: Program, number: int, how: dict) -> Sampled:
         plan = self.scheme.plan
         sums = on_net(program, net_for(number, plan.scrambles), plan, **how)
@@ -101,6 +108,8 @@ class Sampler:
         how = {"seed": self.seed, "stream": stream, "threads": self.threads}
         if scheme.plan.scrambles:
             sums = on_net(program, net_for(number, scheme.plan.scrambles), scheme.plan, **how)
+            if sums.interrupted:
+                raise KeyboardInterrupt
             (estimate,) = net_estimates(sums)
             means = sums.means[:, 0]
             spread = means.std(ddof=1)  # as the error is reported, where means are nearly all equal

@@ -24,7 +24,7 @@ from mcx.estimators.reduction.fit import CONTROLLED, Costs, chosen_controls, coe
 from mcx.estimators.reduction.importance import mode, shifted
 from mcx.estimators.reduction.names import NAMES, wished
 from mcx.estimators.reduction.sample import Sampler
-from mcx.estimators.reduction.scheme import Case, Control
+from mcx.estimators.reduction.scheme import Case, Control, Scheme
 from mcx.faults import Refusal, RequestError
 from mcx.machine.draw_plan import DrawPlan
 from mcx.machine.orders import bridge, early_bridge
@@ -117,7 +117,9 @@ def test_a_shift_carries_its_weight():
     plain = interpret(tape, ready.market.values(tape.leaves), there)
     np.testing.assert_allclose(found[weight], ratio, rtol=1e-9)
     for one, output in zip(tape.outputs, moved.outputs, strict=True):
-        np.testing.assert_allclose(found[output.value], plain[one.value] * ratio, rtol=1e-9, atol=1e-13)
+        weighed = 1.0 if one.kind == "life" else ratio  # paid at expiry on every path
+        np.testing.assert_allclose(found[output.value], plain[one.value] * weighed, rtol=1e-9, atol=1e-13)
+    assert [output.kind for output in tape.outputs].count("life") == 1
 
 
 @pytest.mark.parametrize("name", ["average", "barrier", "exchange"])
@@ -206,6 +208,15 @@ def test_the_choice_beats_plain_sampling_and_is_always_the_same():
     assert chosen.results == named.results
     assert chosen.price.standard_error < 0.03 * plain.price.standard_error
     assert abs(chosen.price.value - plain.price.value) < 4 * plain.price.standard_error
+
+
+def test_rounding_decides_nothing():
+    """Of several choices that are exact the first is taken, whatever rounding leaves of each; the note says so."""
+    few = [choice.Trial(Scheme(names, None), burden, False) for names, burden in
+           (((), 1.0), (("controls",), 1e-28), (("controls", "antithetic"), 1e-31), (("importance",), 0.0))]
+    assert choice._found(few).scheme.names == ("controls",)
+    assert choice._noted(few, 8192, []).notes[-1].endswith("; exact")
+    assert choice._found([*few, choice.Trial(Scheme(("stratified",), None), 1e-6, False)]).scheme.names == ("controls",)
 
 
 def test_a_choice_costs_no_more_than_its_share(monkeypatch: pytest.MonkeyPatch):
