@@ -385,6 +385,19 @@ def test_state(tmp_path: Path):
     assert "state on 2027-09-02" in shown and "distance of today's levels" in shown
 
 
+def test_the_state_of_a_contract_that_cannot_be_valued_is_not_followed(tmp_path: Path):
+    """It says why, and what was stated; no next payment and no distance as if nothing had been missed."""
+    text = touch("{2027-06-01: false}").replace("payoff: touch", "conversion: {harbour: composite}\npayoff: touch")
+    text = text.replace("currency: EUR, yield: 1%", "currency: USD, dividends: [{ex: 2027-09-01, cash: 1}]")
+    text = text.replace("rates: {EUR: 2%}", "rates: {EUR: 2%, USD: 3%}")
+    text += "fx: {EUR per USD: {spot: 0.9, vol: 8%}}\ncorrelation: {harbour/EUR per USD: 20%}\n"
+    state = package.readback(written(tmp_path, text)).state
+    assert (state.next, state.distances) == ((), ())
+    assert [each.value for each in state.stated] == ["no"] and len(state.not_followed) == 1
+    assert f"not followed, since the contract cannot be valued: - {state.not_followed[0]}" in " ".join(
+        mcx("readback", tmp_path / "case.yaml").out.split())
+
+
 def test_calendar(tmp_path: Path):
     """What comes next of all contracts, in order of time; of one that was called only what is owed."""
     called = WORST_OF.replace("contract: note", "contract: other").replace("call_barrier: 100%", "call_barrier: 85%")

@@ -6,6 +6,8 @@ from mcx.report.greek_results import GreeksResult
 from mcx.report.results import PriceResult
 from mcx.report.terminal import decimals, fixed
 
+ROUNDING = 1e-9  # an error below it is that of floating point: the value is certain
+
 
 class Scale:
     """How prices are shown: percent of the notional, or money per unit."""
@@ -21,4 +23,5 @@ class Scale:
         return fixed(number * self.factor, places)
 
     def places(self, error: float, digits: int = 2) -> int:
-        return decimals(error * self.factor, digits, self.fewest)
+        error *= self.factor
+        return decimals(error if error > ROUNDING else 0.0, digits, self.fewest)

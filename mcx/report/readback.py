@@ -73,7 +73,7 @@ def readback(dated: DatedContract, market: Market | None, path: PathResult | Non
         quotes=tuple(quotes(market_map)) if market_map else (),
         market=tuple(_market(dated, market_map)) if market_map else (),
         path=path,
-        state=state_view(dated, unrolled.state, market_map) if market_map and dated.valuation else None,
+        state=state_view(dated, unrolled, market_map) if market_map and dated.valuation else None,
     )
 
 

@@ -68,6 +68,9 @@ def _market(dates: tuple[MarketDate, ...], page: Page) -> None:
 def _state(state: StateView, page: Page) -> None:
     """What has become of the contract; nothing where nothing has happened yet but the distances."""
     page.heading(f"state on {state.valuation}")
+    if state.not_followed:
+        page.line("not followed, since the contract cannot be valued:")
+        page.items(state.not_followed)
     if state.ended:
         page.line(f"ended on {state.ended}", style="bold")
     if state.past:

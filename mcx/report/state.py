@@ -15,6 +15,7 @@ from mcx.report.results import Owed, Payment, Sentence
 from mcx.report.state_results import Fixed, PastLine, StatedLine, StateView
 from mcx.report.wording import figure, joined
 from mcx.tape.state import State
+from mcx.tape.unroll import Unrolled
 
 
 def owed(ready: Ready) -> tuple[Owed, ...]:
@@ -92,8 +93,10 @@ def to_deliver(dated: DatedContract, state: State) -> Iterator[str]:
             yield f"owed on {each.due}: {figure(each.whole)} shares of {asset} for each {unit}{cash}"
 
 
-def state_view(dated: DatedContract, state: State, market: MarketMap) -> StateView:
-    """Everything that the past has settled, for the readback."""
+def state_view(dated: DatedContract, unrolled: Unrolled, market: MarketMap) -> StateView:
+    """Everything that the past has settled, for the readback; of a contract that cannot be simulated only why it is not
+    followed, and what was stated."""
+    state = unrolled.state
     contract = dated.contract
     paid = [each for each in state.payments if not each.owed and each.amount]
     return StateView(
@@ -110,8 +113,9 @@ def state_view(dated: DatedContract, state: State, market: MarketMap) -> StateVi
         running=tuple(Sentence(name, _values(dated, name, values))
                       for name, values in (state.terms | state.running).items()),
         ended=str(state.ended or ""),
-        next=tuple(_next(dated, state)),
-        distances=tuple(distances(dated, state, market)),
+        next=() if unrolled.faults else tuple(_next(dated, state)),
+        distances=() if unrolled.faults else tuple(distances(dated, state, market)),
+        not_followed=tuple(fault.text for fault in unrolled.faults),
     )
 
 

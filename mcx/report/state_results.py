@@ -51,7 +51,8 @@ class Distance(Result):
 @dataclass(frozen=True, slots=True)
 class StateView(Result):
     """What has become of a contract by the valuation date. `accrued` is in the unit of the price; `running` are values
-    so far; `next` what comes next; `distances` of today's levels to those that matter."""
+    so far; `next` what comes next; `distances` of today's levels to those that matter. `not_followed` says why nothing but
+    what was `stated` is known, and is empty otherwise."""
 
     valuation: str
     fixings: tuple[Fixed, ...]
@@ -65,6 +66,7 @@ class StateView(Result):
     ended: str
     next: tuple[Sentence, ...]
     distances: tuple[Distance, ...]
+    not_followed: tuple[str, ...]
 
 
 @dataclass(frozen=True, slots=True)
