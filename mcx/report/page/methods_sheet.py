@@ -22,7 +22,8 @@ def methods_sheet(result: MethodsResult, scene: Scene | None) -> Sheet:
     first = result.methods[0]
     best = (f"{_plus(first.method)} is exact here" if first.efficiency is None else
             "plain sampling: no method beats it here" if first.method == NONE else
-            f"{_plus(first.method)}: plain sampling takes {short(first.efficiency)} times the processor time to the same error")
+            f"{_plus(first.method)}: plain sampling takes {short(first.efficiency)} times the processor time to the same "
+            "error")
     rows = tuple(tuple(method_row(line, factor, percent)) for line in result.methods)
     blocks = [Table("variance reduction, the most efficient first", (HEADS[0], unit, *HEADS[1:-1], f"{HEADS[-1]}, s"),
                     rows, note=explained(percent), wide=True), *_lines(result, factor, unit)]
