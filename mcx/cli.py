@@ -16,6 +16,7 @@ from contextlib import contextmanager
 from typing import TYPE_CHECKING
 
 import click
+from click.shell_completion import CompletionItem
 
 if TYPE_CHECKING:
     from mcx.report.results import Result
@@ -26,10 +27,32 @@ NO, WRONG, INTERRUPTED = 1, 2, 130
 MOVES = "-5%,-4%,-3%,-2%,-1%,0,1%,2%,3%,4%,5%"  # of a ladder or grid, where none are named
 
 EXPONENT = re.compile(r"[+-]?[0-9]+(\.[0-9]*)?[eE][+-]?[0-9]{1,2}")
+
+
+def _files(context: click.Context, parameter: click.Parameter, begun: str) -> list[CompletionItem]:
+    """The shell completes names of files itself; without a word from us it would offer none."""
+    return [CompletionItem(begun, type="file")]
+
+
+def _methods(context: click.Context, parameter: click.Parameter, begun: str) -> list[CompletionItem]:
+    """The methods of variance reduction, each after those that stand before it in the list."""
+    from mcx.estimators.reduction.names import AUTO, NAMES, NONE
+
+    listed, _, last = begun.rpartition(",")
+    names = [name for name in NAMES if name not in listed.split(",")] if listed else (NONE, AUTO, *NAMES)
+    return [CompletionItem(f"{listed},{name}" if listed else name) for name in names if name.startswith(last)]
+
+
+def _definitions(context: click.Context, parameter: click.Parameter, begun: str) -> list[CompletionItem]:
+    from mcx.checked.library import shipped_names
+
+    return [CompletionItem(name) for name in shipped_names() if name.startswith(begun)]
+
+
 REPORT = click.option("--report", type=click.Path(), help="Write a page of HTML to this file.")
 PICTURE = click.option("--picture", type=click.Path(), metavar="FILE",
                        help="Draw the pictures of that page, as .png or .svg.")
-FILES = click.argument("files", nargs=-1, required=True, metavar="FILES…")
+FILES = click.argument("files", nargs=-1, required=True, metavar="FILES…", shell_complete=_files)
 AS_JSON = click.option("--json", "as_json", is_flag=True, help="One JSON object, full precision.")
 THREADS = click.option("--threads", type=int, help="Processors to use; changes no digit.  [all]")
 
@@ -51,8 +74,9 @@ class Whole(click.ParamType):
 def sampling(command: Callable) -> Callable:
     """The options that mean the same on every command that draws paths."""
     for option in (
-        click.option("--reduction", default="none", metavar="A,B,…",
-                     help="Variance reduction: none or methods; auto of prices; none of verify.  [none]"),
+        click.option("--reduction", default="none", metavar="A,B,…", shell_complete=_methods,
+                     help="Variance reduction: none, or methods that 'mcx methods' lists; price also takes auto, "
+                          "verify only none.  [none]"),
         THREADS,
         click.option("--seed", type=int, help="Seed of the random numbers.  [1]"),
         click.option("--seconds", type=float, help="As many paths as this time allows, by a pilot run."),
@@ -203,7 +227,7 @@ def readback(files: tuple[str, ...], path: str | None, calendar: bool, as_json: 
 
 
 @cli.command()
-@click.argument("name", required=False)
+@click.argument("name", required=False, shell_complete=_definitions)
 @click.option("--blank", is_flag=True, help="Contract, market and quote to fill in.")
 @click.option("--assets", metavar="A,B", help="The assets to write into them.")
 @click.option("--schema", is_flag=True, help="JSON schema for editors: contracts on NAME, or on any definition.")

@@ -92,7 +92,8 @@ def test_the_terminal_says_what_a_reader_needs():
     for said in ("the quote on our footing", "half the bid-offer on top", "from quarry 62.2 to our spot",
                  "put back on the bid", "input band", "never the band", "each input alone", "smallest joint move",
                  "other readings", "bond floor", "day-one margin", "for each year of expected life",
-                 "the coupon at which", "indicative: nobody has to deal", "no skew", "licensed professional"):
+                 "the coupon at which", "stated is 3 %; the price moves by",
+                 "indicative: nobody has to deal", "no skew", "licensed professional"):
         assert said in words, said
     assert max(map(len, outcome.out.splitlines())) <= 80
 

@@ -173,7 +173,8 @@ class TermDays:
         if rule.end_of_month and start != last and self.good.rolled(start) != self.good.back(last):
             raise WrongDates(rule.start.place, f"'end_of_month' needs a rule from the last day of a month, not {start}")
         if not rule.end_of_month and rule.every.unit in MONTHS and start == last and start.day < 31:
-            note = (f"dates from {start} every {rule.every.count} {rule.every.unit}s keep to day {start.day} of their "
+            count, unit = rule.every.count, rule.every.unit
+            note = (f"dates from {start} every {count} {unit}{'s' * (count > 1)} keep to day {start.day} of their "
                     "months; 'end_of_month: true' would take the last days")
             self.notes += [note] if note not in self.notes else []
 

@@ -85,7 +85,7 @@ def precision(paths: int | None, within: str | float | None, seconds: float | No
     if paths is not None:
         return Precision(paths=_whole(paths), words=f"{paths:,} paths")
     if seconds is not None:
-        return Precision(seconds=_time(seconds), words=f"{seconds:g} seconds")
+        return Precision(seconds=_time(seconds), words=f"{seconds:g} second{'s' * (seconds != 1.0)}")
     return Precision() if within is None else _half_width(within)
 
 

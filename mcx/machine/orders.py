@@ -24,7 +24,9 @@ rest of that path.
 Of several assets the components are those of all paths together. In every step the leading principal directions of
 what the assets do in all become normals of their own, by turns of the step's normals; along each the path has
 components in time as one asset's has. Where the steps' covariances are multiples of one another these are
-the principal components of the whole.
+the principal components of the whole. On an average of five assets over 52 dates and 2^16 points the variance ratio is
+98,000 +- 17,000, against 1,900 +- 330 with components of each asset alone; what hangs on the worst of a few is about as
+well off with either.
 """
 
 from __future__ import annotations

@@ -133,8 +133,8 @@ def limits(dated: DatedContract, model: ModelBracket | None = None) -> Iterator[
         yield ("the model bracket is how far vols by strike leave the price open; one vol for each asset and tenor "
                "cannot do better: neither more paths nor better inputs decide what lies inside it")
     elif _turns(settled):
-        yield ("under skew the levels where this contract turns have vols of their own: price it with their vol too, "
-               "and read the two as a bracket")
+        yield ("under skew the levels where this contract turns have vols of their own: with vols by strike in the "
+               "market 'mcx price' and 'mcx verify' show the model bracket, how far apart they price it")
     if _looks_back(settled):
         yield ("returns from one date to another live on forward vol and forward skew, which one vol for each tenor "
                "does not say: indicative only")

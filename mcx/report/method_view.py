@@ -34,7 +34,7 @@ def explained(percent: bool) -> str:
     """What the columns mean."""
     return ("variance ratio: of plain sampling over this, at equal paths, ± its standard error; cost: processor time "
             "for a path over that of plain sampling; efficiency: variance × time of plain sampling over this; z: distance "
-            "from all others pooled; to 1 bp: seconds until the 95 % half-width is 1 bp of the "
+            "from all others pooled; to 1 bp: elapsed seconds until the 95 % half-width is 1 bp of the "
             + ("notional" if percent else "price"))
 
 
@@ -66,11 +66,12 @@ def method_row(line: MethodLine, factor: float, percent: bool) -> Iterator[str]:
     yield f"{error:.2g}" if line.efficiency is not None else "exact"
     yield f"{line.z:+.2f}"
     yield "" if line.variance_ratio is None else "1" if line.method == NONE else (
-        f"{_short(line.variance_ratio)} ± {_short(line.variance_ratio_error)}")
+        f"{short(line.variance_ratio)} ± {short(line.variance_ratio_error)}")
     yield f"{line.cost_ratio:.2f}"
-    yield "" if line.efficiency is None else _short(line.efficiency)
+    yield "" if line.efficiency is None else short(line.efficiency)
     yield "" if line.efficiency is None else f"{line.seconds_to_1bp:.2g}"
 
 
-def _short(number: float) -> str:
+def short(number: float) -> str:
+    """A ratio in a few digits: 2.3, 41.7, 12,345."""
     return f"{number:,.0f}" if number >= 100.0 else f"{number:.2g}" if number < 10.0 else f"{number:.1f}"

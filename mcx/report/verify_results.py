@@ -200,7 +200,8 @@ class Money(Result):
 @dataclass(frozen=True, slots=True)
 class SolvedTerm(Result):
     """A value of the term at which the contract is worth `target`: one entry for each, or one with `value` None.
-    `slope` is the price for 1 of the term; `together`: its other numbers move along."""
+    `slope` is the price for 1 of the term; `together`: its other numbers move along. Values are numbers, 0.019 where
+    the contract writes 1.9 %; `percent` says that it does."""
 
     term: str
     target: float
@@ -212,6 +213,7 @@ class SolvedTerm(Result):
     low: float
     high: float
     together: bool
+    percent: bool
     note: str
 
 

@@ -259,7 +259,7 @@ def _solved(solved: Solved) -> Iterator[SolvedTerm]:
     def line(each: Solution | None, note: str = "") -> SolvedTerm:
         numbers = (None,) * 4 if each is None else (each.move, each.error, each.slope, each.z)
         return SolvedTerm(solved.term.name, solved.target, solved.stated, *numbers, found.low, found.high,
-                          solved.together, note)
+                          solved.together, solved.term.type == "percent", note)
 
     for each in found.found:
         yield line(each)

@@ -228,11 +228,15 @@ def _money(result: VerifyResult, scale: Scale, places: int, page: Page) -> None:
 
 
 def solved(each: SolvedTerm, scale: Scale) -> str:
-    looked = f"looked for from {each.low:.6g} to {each.high:.6g}"
+    """Where a term meets the target, in the unit in which a contract writes it."""
+    factor, sign, step = (100.0, " %", "1 %") if each.percent else (1.0, "", "0.01")
+    looked = f"looked for from {factor * each.low:.6g}{sign} to {factor * each.high:.6g}{sign}"
+    stated = f"stated is {factor * each.stated:.6g}{sign}"
     if each.value is None:
-        return f"{each.note} ({looked}; stated is {each.stated:.6g})"
-    places = decimals(each.standard_error, 2, 4)
+        return f"{each.note} ({looked}; {stated})"
+    value, error = factor * each.value, factor * each.standard_error
+    places = decimals(error, 2, 2 if each.percent else 4)
     slope = scale.show(0.01 * each.slope, 4)
     along = "; its other numbers move along" if each.together else ""
-    return (f"{fixed(each.value, places)} ± {fixed(each.standard_error, places)} (standard error), stated is "
-            f"{each.stated:.6g}; the price moves by {slope} {scale.unit} for 0.01 of it; {looked}{along}")
+    return (f"{fixed(value, places)}{sign} ± {fixed(error, places)}{sign} (standard error), {stated}; "
+            f"the price moves by {slope} {scale.unit} for {step} of it; {looked}{along}")

@@ -18,11 +18,11 @@ from test_calibration import KNOWN, RUNS
 
 from mcx.checked.load import load
 from mcx.estimators.estimate import Estimate, estimates
-from mcx.estimators.nets import SCRAMBLES, Net, Order, clock, net_draws, net_estimates, net_for, on_net
+from mcx.estimators.nets import SCRAMBLES, Net, Order, clock, moves, net_draws, net_estimates, net_for, on_net
 from mcx.faults import RequestError
 from mcx.leaves.market_map import MarketMap
 from mcx.machine.draw_plan import DrawPlan
-from mcx.machine.run import ScrambleSums
+from mcx.machine.run import ScrambleSums, draws
 from mcx.tape.program import Program
 from mcx.tape.steps import Grid
 
@@ -150,6 +150,21 @@ def test_the_clock_is_the_variance_of_each_step():
     """Two assets: what the steps add up to is the total variance to the last date."""
     ready = KNOWN["exchange"].ready()
     np.testing.assert_allclose(variances(ready).sum(axis=0), [0.22**2, 0.30**2], rtol=1e-12)
+
+
+def test_components_are_of_what_assets_do_together():
+    """Two assets over one step: the matrix that moves their logs has their covariance, and the first coordinate moves
+    them along its larger eigenvector, by numpy."""
+    ready = KNOWN["exchange"].ready()
+    (moved,) = moves(*laid_out(ready))
+    covariance = moved @ moved.T
+    np.testing.assert_allclose(np.diag(covariance), [0.22**2, 0.30**2], rtol=1e-12)
+    assert abs(covariance[0, 1]) > 0.01
+    plain, mixed = (draws(ready.program, seed=SEED, numbers=range(64), plan=net_draws(Net(64, 1), order, *laid_out(ready)))
+                    for order in (Order.STEPS, Order.COMPONENTS))
+    along = np.linalg.eigh(covariance)[1]  # the larger one last
+    sizes = np.abs(mixed[:, :2] @ moved.T @ along[:, ::-1])
+    np.testing.assert_allclose(sizes, np.abs(plain[:, :2]) * np.sqrt(np.linalg.eigvalsh(covariance)[::-1]), atol=1e-9)
 
 
 def test_random_paths_keep_the_normal_quantile():

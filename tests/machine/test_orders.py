@@ -190,3 +190,5 @@ def test_directions_that_assets_share_hang_on_no_library():
     across = order.pairs[len(order.pairs) - 12 * (4 + 3 + 2 + 1):].reshape(12, -1, 2)
     np.testing.assert_array_equal(across - 5 * np.arange(12)[:, None, None], np.repeat(across[:1], 12, axis=0))
     assert len(order.pairs) == 5 * 11 + 12 * 10
+    as_one = np.outer([0.2, 0.3, 0.1], [1.0, 1e-11, 1e-11])  # what rounding leaves of other directions takes no turn
+    assert len(components(np.repeat(as_one[None], 4, axis=0)).pairs) == 3 * 3 + 4 * 2

@@ -109,7 +109,7 @@ def test_limits_touch_the_contract(tmp_path: Path):
     cliquet = "\n".join(package.price(EXAMPLES / "cliquet.yaml", paths=64).to_dict()["prices"][0]["limits"])
     assert "forward vol and forward skew" in cliquet
     note = "\n".join(package.price(EXAMPLES / "harbour_lantern.yaml", paths=64).limits)
-    for words in ("read the two as a bracket", "one fixed correlation", "promise of the issuer"):
+    for words in ("have vols of their own", "one fixed correlation", "promise of the issuer"):
         assert words in note
 
 

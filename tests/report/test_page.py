@@ -40,6 +40,30 @@ rates: {EUR: 4%}
 assets:
   harbour: {spot: 100, currency: EUR, yield: 1.5%, vol: {value: 22%, uncertain: 1%, source: broker}}
 """
+EXCHANGE = """\
+contract: Exchange
+currency: EUR
+units: 1
+assets: [harbour, lantern]
+payoff: exchange_option
+terms: {receive: harbour, give: lantern, receive_units: 1, give_units: 1, expiry: 1y}
+---
+market: 0y
+rates: {EUR: 2%}
+assets:
+  harbour: {spot: 100, yield: 0%, vol: 20%}
+  lantern: {spot: 100, yield: 0%, vol: 20%}
+correlation: {harbour/lantern: 50%}
+uncertainty: {vol: 1%, correlation: 10%}
+---
+quote: Saltmarsh dealing desk
+at: 0y
+side: mid
+unit: per unit
+price: 40
+accrual: dirty
+commitment: indicative
+"""
 ALL = [*sorted(EXAMPLES.glob("*.yaml")), *sorted((Path(__file__).parents[1] / "corners").glob("*.yaml"))]
 PATHS = ("--paths", 4096)
 SVG = "{http://www.w3.org/2000/svg}"
@@ -112,6 +136,30 @@ def test_a_page_says_what_the_result_says(pages: dict[str, Path]):
                  f"mcx price {NOTE} --paths 4096 --seed 1 --reduction none"):
         assert text in said, text
     assert len(set(re.findall(r"\b[0-9a-f]{64}\b", said))) == 2
+
+
+def test_readings_on_the_page_are_those_that_differ(pages: dict[str, Path]):
+    """Prices of readings are on other paths than the contract's: beside each stands its difference."""
+    readings = section(pages["verify"], "other readings of the contract")
+    assert "difference" in readings
+    assert "knock-in at each close" in readings
+    assert "knock-in level of the strike" not in readings  # the strike is the initial level
+
+
+def test_an_input_that_cannot_meet_the_quote(tmp_path: Path):
+    """The range that was looked through is no move, and too wide for a column of a printed page."""
+    files = written(tmp_path, EXCHANGE)
+    assert mcx("verify", files, *PATHS, "--report", tmp_path / "page.html").code == 1
+    found = section(tmp_path / "page.html", "what would have to be true, each input alone")
+    assert "correlation harbour/lantern none" in found
+    assert re.search(r"correlation harbour/lantern: no move from -[0-9.]+ % to \+[0-9.]+ % meets the quote", found)
+
+
+def section(page: Path, title: str) -> str:
+    """The text of one section of a page."""
+    text = page.read_text(encoding="utf-8")
+    start = text.index(f"<h3>{title}</h3>")
+    return Tags(text[start : text.index("</section>", start)]).said
 
 
 def test_the_command_finds_the_number_again(pages: dict[str, Path]):

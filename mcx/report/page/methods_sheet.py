@@ -4,8 +4,9 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
+from mcx.estimators.reduction.names import NONE
 from mcx.report.method_results import MethodsResult
-from mcx.report.method_view import HEADS, against_closed_form, explained, found, method_row, refused
+from mcx.report.method_view import HEADS, against_closed_form, explained, found, method_row, refused, short
 from mcx.report.page.blocks import Facts, Picture, Sheet, Table, notes
 from mcx.report.page.price_sheet import evidence
 from mcx.report.pictures.draw import Series, errors
@@ -20,9 +21,9 @@ def methods_sheet(result: MethodsResult, scene: Scene | None) -> Sheet:
     unit, factor = ("%", 100.0) if percent else (f"{result.currency} per unit", 1.0)
     first = result.methods[0]
     best = (f"{_plus(first.method)} is exact here" if first.efficiency is None else
-            f"{_plus(first.method)} takes {first.seconds_to_1bp:.2g} s to 1 bp" + (
-                f", plain sampling {first.efficiency:.3g} times as long" if first.method != "none" else
-                ": plain sampling, no method beats it here"))
+            "plain sampling: no method beats it here" if first.method == NONE else
+            f"{_plus(first.method)}: plain sampling takes {short(first.efficiency)} times the processor time to the same "
+            "error")
     rows = tuple(tuple(method_row(line, factor, percent)) for line in result.methods)
     blocks = [Table("variance reduction, the most efficient first", (HEADS[0], unit, *HEADS[1:-1], f"{HEADS[-1]}, s"),
                     rows, note=explained(percent), wide=True), *_lines(result, factor, unit)]

@@ -20,6 +20,7 @@ from mcx.report.verify_view import (
     implied_row,
     money_rows,
     rest_row,
+    signed,
     solved,
 )
 
@@ -87,20 +88,32 @@ def _implied(result: VerifyResult) -> Iterator[Picture | Table | Notes]:
         said = "Half-widths from the market to where the input alone meets the quote: " + ", ".join(
             f"{row.name} {row.value:+.2f}" for row in drawn) + "."
         yield Picture(title, moves(title, said, drawn, "half-widths; shaded: inside the band"))
-    rows, left = cut([(*implied_row(each)[:-1], _move(halves.get((each.input, each.asset))), implied_row(each)[-1])
-                      for each in result.implied], MOST_IMPLIED)
-    heads = ("input", "", "value", "error", "move", "± stated", "inside")
-    yield Table("what would have to be true, each input alone", heads, rows, words=2, tail=6, note=left)
+    rows, left = cut([_told(each, halves.get((each.input, each.asset))) for each in result.implied], MOST_IMPLIED)
+    heads = ("input", "value", "error", "move", "± stated", "inside")
+    nowhere = [f"{_named(each)}: no move from {signed(each.low)} to {signed(each.high)} meets the quote"
+               for each in result.implied if each.value is None and not implied_row(each)[-1]]
+    yield Table("what would have to be true, each input alone", heads, rows, tail=5,
+                note="; ".join(filter(None, (left, *nowhere))))
     if result.joint is not None:
         found = (f"{' '.join(filter(None, (each.input, each.asset)))} by {each.half_widths:+.2f} of its half-width"
                  for each in result.joint.moves)
         yield Notes(f"smallest joint move: {result.joint.half_widths:.2f} half-widths in all", tuple(found))
 
 
+def _told(each: ImpliedInput, half: float | None) -> tuple[str, ...]:
+    """A row of the page, which is narrower than a terminal: the input in one cell, the range of no solution below."""
+    _, _, value, error, move, inside = implied_row(each)
+    return _named(each), value, error, "" if each.value is None else move, _move(half), inside
+
+
+def _named(each: ImpliedInput) -> str:
+    return " ".join(filter(None, (each.input, each.asset)))
+
+
 def _in_halves(each: ImpliedInput, half: float) -> Bar:
     """A move in half-widths; the error of a forward's level as a share, as its move is."""
     share = 1.0 if each.input in IN_PERCENT or each.measure == "move" else (1.0 + each.move) / each.value
-    return Bar(" ".join(filter(None, (each.input, each.asset))), each.move / half,
+    return Bar(_named(each), each.move / half,
                abs(each.standard_error * share / half), implied_row(each)[2].split(" at ")[0])
 
 
@@ -139,8 +152,11 @@ def _inputs(result: VerifyResult, scale: Scale, places: int) -> Iterator[Picture
 
 
 def _readings(result: VerifyResult, scale: Scale, places: int) -> Iterator[Table]:
-    rows = tuple((each.reading, scale.show(each.price, places), scale.show(each.left, places),
-                  "yes" if each.closes_gap else "") for each in result.readings
-                 if each.price is not None and each.left is not None)
+    """Those that differ from the contract, as the text has them: each price is on paths over the dates of all readings,
+    so that only its difference can be held against the price of the contract."""
+    rows = tuple((each.reading, scale.show(each.price, places), scale.show(each.difference, places),
+                  scale.show(each.left, places), "yes" if each.closes_gap else "") for each in result.readings
+                 if each.price is not None and not each.note)
     if rows:
-        yield Table("other readings of the contract", ("reading", scale.unit, "gap left", "closes it"), rows, tail=3)
+        heads = ("reading", scale.unit, "difference", "gap left", "closes it")
+        yield Table("other readings of the contract", heads, rows, tail=4)

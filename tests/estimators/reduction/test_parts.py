@@ -16,7 +16,7 @@ from mcx.estimators.nets import clock
 from mcx.estimators.plan import precision
 from mcx.estimators.price import value
 from mcx.estimators.ready import Ready, prepare
-from mcx.estimators.reduction import choice
+from mcx.estimators.reduction import choice, fit
 from mcx.estimators.reduction.antithetic import paired
 from mcx.estimators.reduction.catalogue import conflict, scheme_of
 from mcx.estimators.reduction.choice import CHOICES, best
@@ -28,7 +28,7 @@ from mcx.estimators.reduction.scheme import Case, Control, Scheme
 from mcx.faults import Refusal, RequestError
 from mcx.machine.draw_plan import DrawPlan
 from mcx.machine.orders import bridge, early_bridge
-from mcx.machine.run import draws, run
+from mcx.machine.run import Stream, draws, run
 from mcx.tape.adjoint import by_normals
 from mcx.tape.interpret import interpret
 
@@ -208,6 +208,26 @@ def test_the_choice_beats_plain_sampling_and_is_always_the_same():
     assert chosen.results == named.results
     assert chosen.price.standard_error < 0.03 * plain.price.standard_error
     assert abs(chosen.price.value - plain.price.value) < 4 * plain.price.standard_error
+
+
+def test_pilots_share_no_number_with_the_run(monkeypatch: pytest.MonkeyPatch):
+    """A choice or a coefficient that had seen the run's paths would bias it: each pilot has a stream of its own."""
+    seen = {"choice": set(), "fit": set()}
+    independent, values_by_path = Sampler.independent, fit.values_by_path
+
+    def trial(sampler: Sampler, wanted: int, stream: int = Stream.PILOT):
+        seen["choice"].add(stream)
+        return independent(sampler, wanted, stream)
+
+    def fitting(program, **how: object):
+        seen["fit"].add(how["stream"])
+        return values_by_path(program, **how)
+
+    monkeypatch.setattr(Sampler, "independent", trial)
+    monkeypatch.setattr(fit, "values_by_path", fitting)
+    best(Case(made("average", FLAT), SEED))
+    assert seen == {"choice": {Stream.CHOICE}, "fit": {Stream.COEFFICIENTS}}
+    assert len(set(Stream)) == len(Stream) and Stream.MAIN not in (Stream.CHOICE, Stream.COEFFICIENTS)
 
 
 def test_rounding_decides_nothing():
