@@ -10,7 +10,7 @@ from xml.etree import ElementTree
 
 import closed_forms as forms
 import pytest
-from front_door import CALL, MARKET, SEED, mcx, refused, written
+from front_door import CALL, EXAMPLES, MARKET, SEED, mcx, refused, written
 
 import mcx as package
 from mcx.estimators.reduction.sample import Sampled, Sampler
@@ -182,3 +182,13 @@ def test_an_interruption_between_contracts(average: Path, tmp_path: Path, presse
     assert outcome.code == 130 and outcome.json["not_compared"] == ["Another"]
     assert [each["contract"] for each in outcome.json["contracts"]] == ["Average"]
     assert mcx("methods", both, "--paths", 4096).out.rstrip().endswith("interrupted: not compared are Another")
+
+
+def test_what_is_sure_stays_sure_where_paths_carry_weights():
+    """Probabilities of importance sampling: that a memory note pays a coupon at all is nearly sure, not more."""
+    result = package.price(EXAMPLES / "harbour_lantern.yaml", paths=1 << 14, seed=SEED, reduction="importance")
+    chances = [one for each in result.conditions for one in (each, *each.dates)]
+    assert chances and all(-1e-12 <= one.probability <= 1.0 + 1e-12 for one in chances)
+    plain = package.price(EXAMPLES / "harbour_lantern.yaml", paths=1 << 14, seed=SEED + 1)
+    error = (result.expected_life_standard_error**2 + plain.expected_life_standard_error**2) ** 0.5
+    assert abs(result.expected_life - plain.expected_life) < 4 * error

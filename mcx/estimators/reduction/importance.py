@@ -6,12 +6,13 @@ options", Mathematical Finance 9 (1999)). The payoff is counted from its value f
 does not hide it. The mode is climbed to, by the slopes that the adjoint of the tape gives, from the best of straight
 paths, where something is paid: a pilot would see only zeros. Every output carries the weight, exp(-shift z -
 |shift|^2 / 2), so that a probability or a life is as unbiased as the price; the weight itself, whose mean is 1, is a
-control.
+control. Probabilities and lives are weighted as their distance from what they are on the middle path, so that what is
+sure on every path stays sure.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -45,15 +46,24 @@ def change(case: Case, draft: Draft) -> Draft:
     if size < SMALLEST:
         raise Inapplicable("the contract pays most where paths are drawn anyway")
     note = f"importance: paths are drawn {size:.2f} standard deviations away"
-    weighted, weight = shifted(tape, shift)
+    weighted, weight = shifted(tape, shift, _middle(case, tape))
     outputs = (*weighted.outputs, Output.of("control", weight, "weight"))
     controls = (*draft.controls, Control("weight of a path", 1.0, asked=False))
     return replace(draft, tape=drop_dead_code(replace(weighted, outputs=outputs)), controls=controls).noted(note)
 
 
-def shifted(tape: Tape, shift: np.ndarray) -> tuple[Tape, int]:
+def _middle(case: Case, tape: Tape) -> list[float]:
+    """The outputs of a tape on the path of no surprise."""
+    values = interpret(tape, case.ready.market.values(tape.leaves), np.zeros((tape.normals, 1)),
+                       np.full((tape.uniforms, 1), 0.5))
+    found = [float(np.ravel(values[output.value])[0]) for output in tape.outputs]
+    return [round(value, 8) if np.isfinite(value) else 0.0 for value in found]
+
+
+def shifted(tape: Tape, shift: np.ndarray, middle: Sequence[float]) -> tuple[Tape, int]:
     """The tape on normals moved by shift (normals,), its outputs times the weight, and the weight's value. What no draw
-    decides, such as the life of a note that cannot end early, needs no weight; legs keep theirs, as their sum does."""
+    decides, such as the life of a note that cannot end early, needs no weight; legs keep theirs, as their sum does.
+    What takes no controls is weighted as its distance from the number in `middle` (outputs,)."""
     builder = Builder()
     made: list[int] = []
     drawn: list[bool] = []
@@ -76,9 +86,17 @@ def shifted(tape: Tape, shift: np.ndarray) -> tuple[Tape, int]:
         if size:
             exponent = builder.emit(Op.STEP, exponent, builder.constant(-size), builder.input(Op.NORMAL, dimension))
     weight = builder.emit(Op.EXP, exponent)
-    outputs = [replace(output, value=builder.emit(Op.MUL, made[output.value], weight), flag=False)
-               if drawn[output.value] or output.kind in CONTROLLED else output.at(made[output.value])
-               for output in tape.outputs]
+
+    def weighted(output: Output, centre: float) -> Output:
+        value = made[output.value]
+        if output.kind in CONTROLLED:
+            return replace(output, value=builder.emit(Op.MUL, value, weight), flag=False)
+        if not drawn[output.value]:
+            return output.at(value)
+        away = builder.emit(Op.MUL, builder.emit(Op.SUB, value, builder.constant(centre)), weight)
+        return replace(output, value=builder.emit(Op.ADD, away, builder.constant(centre)), flag=False)
+
+    outputs = list(map(weighted, tape.outputs, middle))
     return builder.tape(outputs, tape.normals, tape.uniforms), weight
 
 

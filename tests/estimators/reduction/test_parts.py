@@ -105,20 +105,23 @@ def test_a_pair_is_a_path_and_its_mirror(name: str):
 
 
 def test_a_shift_carries_its_weight():
-    """Each output of the shifted tape at z: that of the tape at z + shift, times the ratio of the densities."""
+    """Each output of the shifted tape at z: that of the tape at z + shift, times the ratio of the densities; of what
+    takes no controls the distance from a given number is weighted."""
     ready = made("barrier", CURVED)
     tape = ready.unrolled.tape
     rng = np.random.default_rng(SEED)
     z, shift = rng.normal(size=(tape.normals, 50)), rng.normal(size=tape.normals)
-    moved, weight = shifted(tape, shift)
+    middle = [0.25 * (output.kind not in CONTROLLED) for output in tape.outputs]
+    moved, weight = shifted(tape, shift, middle)
     there = z + shift[:, None]
     ratio = np.exp(-0.5 * (there**2).sum(axis=0) + 0.5 * (z**2).sum(axis=0))
     found = interpret(moved, ready.market.values(moved.leaves), z)
     plain = interpret(tape, ready.market.values(tape.leaves), there)
     np.testing.assert_allclose(found[weight], ratio, rtol=1e-9)
-    for one, output in zip(tape.outputs, moved.outputs, strict=True):
+    for one, output, centre in zip(tape.outputs, moved.outputs, middle, strict=True):
         weighed = 1.0 if one.kind == "life" else ratio  # paid at expiry on every path
-        np.testing.assert_allclose(found[output.value], plain[one.value] * weighed, rtol=1e-9, atol=1e-13)
+        np.testing.assert_allclose(found[output.value], (plain[one.value] - centre) * weighed + centre, rtol=1e-9,
+                                   atol=1e-13)
     assert [output.kind for output in tape.outputs].count("life") == 1
 
 
