@@ -16,7 +16,7 @@ from mcx.estimators.nets import clock
 from mcx.estimators.plan import precision
 from mcx.estimators.price import value
 from mcx.estimators.ready import Ready, prepare
-from mcx.estimators.reduction import choice, fit
+from mcx.estimators.reduction import choice, fit, sample
 from mcx.estimators.reduction.antithetic import paired
 from mcx.estimators.reduction.catalogue import conflict, scheme_of
 from mcx.estimators.reduction.choice import CHOICES, best
@@ -231,6 +231,17 @@ def test_pilots_share_no_number_with_the_run(monkeypatch: pytest.MonkeyPatch):
     best(Case(made("average", FLAT), SEED))
     assert seen == {"choice": {Stream.CHOICE}, "fit": {Stream.COEFFICIENTS}}
     assert len(set(Stream)) == len(Stream) and Stream.MAIN not in (Stream.CHOICE, Stream.COEFFICIENTS)
+
+
+def test_a_pilot_that_was_cut_short_says_nothing(monkeypatch: pytest.MonkeyPatch):
+    """Of points as of paths: the interruption goes on to whoever asked."""
+    sampler = Sampler(scheme_of(Case(made("average", FLAT), SEED), ("sobol-bridge",)), SEED)
+    on_net = sample.on_net
+    monkeypatch.setattr(sample, "on_net", lambda *given, **how: replace(on_net(*given, **how), interrupted=True))
+    assert sampler.sample(2048).interrupted
+    for run_pilot in (sampler.pilot, sampler.independent):
+        with pytest.raises(KeyboardInterrupt):
+            run_pilot(2048)
 
 
 def test_rounding_decides_nothing():
