@@ -152,7 +152,8 @@ def _halve(variances: np.ndarray, root: float) -> tuple[np.ndarray, np.ndarray]:
 
     def wait(start: int, end: int) -> None:
         if end - start > 1:
-            middle = start + 1 + int(np.argmin(np.abs(clock[start + 1 : end] - 0.5 * (clock[start] + clock[end]))))
+            off = np.abs(clock[start + 1 : end] - 0.5 * (clock[start] + clock[end]))
+            middle = start + 1 + int(np.argmin(np.round(off / clock[-1], 12)))  # of two as near the first
             share = (clock[middle] - clock[start]) * (clock[end] - clock[middle]) / (clock[end] - clock[start])
             heappush(waiting, (-float(f"{share:.12e}"), start, middle, end))  # equal steps come in order of time
 
