@@ -46,7 +46,7 @@ def bridges() -> Program:
     return program(lines, rows=8, outputs=range(8), scalars=[0.3, 1.0], normals=2, uniforms=2)
 
 
-NET = DrawPlan(3, components(np.full((6, 1), 0.01)))
+NET = DrawPlan(3, components(np.full((6, 1, 1), 0.1)))
 POINTS = [*range(64), 7, 2**33 + 5, 2**32 + 1000]  # a whole group in order, and strangers
 PROGRAMS = {"asian": asian(6), "bridges": bridges()}
 
