@@ -15,7 +15,7 @@ from mcx.report.price_view import bounds
 from mcx.report.scene import Scene
 from mcx.report.terminal import decimals, fixed
 
-MOST_ROWS, MOST_GROUPS, MOST_BARS, MOST_DELTAS, MOST_VOLS = 40, 4, 12, 4, 11
+MOST_ROWS, MOST_GROUPS, MOST_BARS, MOST_DELTAS, MOST_VOLS = 40, 3, 12, 4, 11
 MOST_SAID = 6
 
 
@@ -32,7 +32,8 @@ def greeks_sheet(result: GreeksResult, scene: Scene | None) -> Sheet:
             ("paths", f"{result.paths:,} in {result.seconds:.2f} s; asked for: {result.planned.asked}"),
             ("seed", f"{result.seed}; variance reduction: {result.reduction}; estimator: {result.estimator}"))
     blocks = [Facts("valuation", head), *_pictures(result), *_numbers(result), *_curve(result, factor, unit, places)]
-    blocks += surroundings(scene, unit) if scene else ()
+    moved = result.ladder or result.grid  # then the levels to come and what is paid are left to the page of the price
+    blocks += surroundings(scene, unit) if scene and not moved else ()
     blocks += [*_ladder(result, factor, places, unit), *_grid(result, factor, unit, places)]
     jumps = [f"{jump.kind} at {jump.place or 'an unnamed place'}" for jump in result.jumps]
     blocks += notes(("not given", few(list(refused(result)), MOST_SAID)), (JUMPS, few(jumps, MOST_SAID)),
@@ -46,11 +47,13 @@ def greeks_sheet(result: GreeksResult, scene: Scene | None) -> Sheet:
 
 
 def _pictures(result: GreeksResult) -> Iterator[Picture]:
-    """One picture for each kind of sensitivity in one unit, with the largest; single numbers are left to the table."""
+    """One picture for each kind of sensitivity in one unit, with the largest; single numbers are left to the table.
+    Deltas for 1 of each asset's own level cannot be held against each other and have none."""
     groups: dict[tuple[str, str], list[Greek]] = {}
     for greek in result.greeks:
         groups.setdefault((greek.name, greek.unit), []).append(greek)
-    for (name, unit), found in [group for group in groups.items() if len(group[1]) > 1][:MOST_GROUPS]:
+    shown = [group for group in groups.items() if len(group[1]) > 1 and group[0][0] != "delta"]
+    for (name, unit), found in shown[:MOST_GROUPS - bool(result.ladder) - bool(result.grid)]:
         rows = [Bar(" ".join(filter(None, (each.asset, each.tenor))), each.value, each.standard_error,
                     fixed(each.value, decimals(each.standard_error, 2, 2)))
                 for each in _largest(found)]
