@@ -138,7 +138,7 @@ class Hits:
         """What a formula may read at the moment at which a flag turns in a stretch."""
         assets = range(len(self.dated.contract.assets))
         if stretch.start == stretch.end:
-            return Scene(lambda _: self.observations.all(stretch.day), _no_running, moment=self._years(stretch, None))
+            return Scene(lambda _: self.observations.all(stretch.day), _no_running, moment=lambda: self._years(stretch, None))
         asset, level = self._barrier(stretch, flag)
         key = LevelKey(asset, stretch.end, stretch.start)
         part = self.builder.keyed(Op.MOMENT, (level,), key, stretch.hit.event.place)
@@ -151,7 +151,7 @@ class Hits:
                                              f"write 'of(spot, {self.dated.contract.assets[asset]})'")
             return (level,)
 
-        return Scene(spot, _no_running, moment=self._years(stretch, part), known={asset: level}, part=part)
+        return Scene(spot, _no_running, moment=lambda: self._years(stretch, part), known={asset: level}, part=part)
 
     def due(self, stretch: Stretch, pay: Pay, part: int | None) -> Due:
         """When an amount is paid that is owed at a moment of a stretch."""
