@@ -171,7 +171,9 @@ class Bench:
         if there.model is not None:
             held = None if settled is None else any(band.holds for band in bands)
             bands = (*bands, model_band(there.model, gap.value, held))
-        far = corner(self.revaluer, there.market, there.effects, open_gap.value, self.sampling) if there.effects else None
+        far = None
+        if there.effects:
+            far = corner(self.revaluer, there.market, there.effects, open_gap.value, self.sampling)
         threshold = max(foot.half_width or 0.0, quote.tolerance or 0.0)
         closing = self.closing(there, open_gap, meets, threshold)
         solved = None

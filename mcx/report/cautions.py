@@ -118,10 +118,11 @@ def _by_strike(vols: Mapping[str, StrikeVols | None]) -> Iterator[str]:
             alike.setdefault((*shown, own.relative), []).append(name)
     for (priced_at, low, high, relative), names in alike.items():
         moves = "a strike in percent goes along where a spot moves" if relative else "strikes stay where a spot moves"
-        yield (f"the price takes the vols of {joined(names)} at {priced_at}, as {'its' if len(names) == 1 else 'their'} "
-               f"market says, and so do sensitivities, ladders, implied inputs, the input band and other readings; vols "
-               f"are linear in strike between the strikes given, flat below {low} and above {high}; the headline's vol "
-               f"stays as it is and {moves}")
+        whose = "its" if len(names) == 1 else "their"
+        yield (f"the price takes the vols of {joined(names)} at {priced_at}, as {whose} market says, and so do "
+               f"sensitivities, ladders, implied inputs, the input band and other readings; vols are linear in strike "
+               f"between the strikes given, flat below {low} and above {high}; the headline's vol stays as it is and "
+               f"{moves}")
 
 
 def _ends_before(curve: Curve, time: float) -> bool:
