@@ -114,6 +114,7 @@ terms: {end: 1y}
 """
 
 
+BY_THE_HEADLINE = " by the headline's vol."
 MEAN = SPREAD.replace("(100 - spot", "(100 - closes").replace("(80 - spot", "(80 - closes").replace(
     "events:", "running:\n  closes:\n    average: spot\n    at: fixings\nevents:").replace(
     "terms:\n", "terms:\n  fixings: {type: dates}\n").replace("{end: 1y}", "{end: 1y, fixings: [6m, 1y]}")
@@ -171,6 +172,23 @@ def test_a_price_without_a_model_is_what_a_quote_is_held_against(tmp_path, price
         assert words in text, words
 
 
+@pytest.mark.parametrize(("price", "width", "reaches"), [(4.90, "3%", True), (4.60, "3%", True), (5.30, "0.1%", False)])
+def test_the_worst_corner_goes_where_the_gap_that_is_left_goes(tmp_path, price, width, reaches):
+    """Below the headline a quote may lie above what each strike at its own vol says."""
+    doubt = f"uncertainty: {{yield: {width}}}\n"
+    file = written(tmp_path, SPREAD + MARKET.replace("vol: 22%", f"vol: {VOLS}") + doubt + QUOTE % price)
+    found = mcx("verify", file, *ASKED, "--json").json
+    rest, corner = found["gap"]["rest"], found["worst_corner"]
+    assert found["gap"]["price"] < 0.0
+    assert (corner["price"] - found["compared"]) * rest > 0.0
+    assert corner["reaches"] is reaches is (abs(corner["price"] - found["compared"]) >= abs(rest))
+    said = "reaches" if reaches else "does not reach"
+    text = " ".join(mcx("verify", file, *ASKED).out.split())
+    assert f"which {said} as far as what is left of the gap; never the band" in text
+    alone = [each["plausible"] for each in found["implied"]]
+    assert (f"inside its stated uncertainty{BY_THE_HEADLINE}" in text) is (True not in alone)
+
+
 def test_a_fixed_rate_of_exchange_is_only_indicative(tmp_path):
     text = CALL.replace("assets: [harbour]", "assets: [harbour]\nconversion: {harbour: quanto}")
     quanto = f"quanto: {{fx_vol: 9%, fx_correlation: -20%, fx: EUR per USD}}, vol: {VOLS}"
@@ -188,6 +206,21 @@ def test_every_verb_names_the_strike_whose_vols_it_takes(tmp_path, verb):
     assumed = mcx(verb, file, "--paths", 4096, "--json").json["assumptions"]
     assert any("the vols of harbour at 100% of the spot, as its market says, and so do sensitivities" in one
                for one in assumed)
+
+
+def test_assets_priced_alike_are_named_together(tmp_path):
+    """One sentence for strikes that are the same, another for strikes that are not."""
+    text = EXAMPLE.read_text(encoding="utf-8").replace("        2500:", "        60%:").replace(
+        "        3300:", "        80%:").replace("        4200:", "        100%:").replace("        5000:", "        120%:")
+
+    def said(text: str) -> list[str]:
+        prices = mcx("price", written(tmp_path, text), *ASKED, "--json").json["prices"]
+        return [one for one in prices[AUTOCALL]["assumptions"] if one.startswith("the price takes the vols of ")]
+
+    both, = said(text)
+    assert both.startswith("the price takes the vols of quarry and harbour at 100% of the spot, as their market says")
+    apart = said(EXAMPLE.read_text(encoding="utf-8"))
+    assert [one.split(" at ")[0].split(" of ")[1] for one in apart] == ["quarry", "harbour"]
 
 
 def test_a_market_to_fill_in_says_how_vols_by_strike_are_written():

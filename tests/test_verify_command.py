@@ -98,6 +98,18 @@ def test_the_terminal_says_what_a_reader_needs():
     assert max(map(len, outcome.out.splitlines())) <= 80
 
 
+def test_ranges_that_were_looked_through_are_no_moves(tmp_path: Path):
+    """A knock-in may be anything above nothing: the range of it starts at 0."""
+    text = " ".join(mcx("verify", NOTE, *ASKED, "--solve", "knock_in").out.split())
+    assert "looked for from 0 % to 192 %" in text and "at the spots that the quote states" in text
+    out = mcx("verify", quoted(tmp_path, QUOTE.replace("price: 9.5", "price: 900")), *ASKED).out
+    assert [line.split() for line in out.splitlines() if line.endswith(" none")][:3] == [
+        ["vol", "harbour", "none"], ["yield", "harbour", "none"], ["rates", "EUR", "none"]]
+    text = " ".join(out.split())
+    assert "- vol harbour: no move from -21.0 % to +40.0 % meets the quote" in text
+    assert "no reference spot was said" in text and "at the spots that the quote states" not in text
+
+
 def test_one_footing(tmp_path: Path):
     """Side, unit, accrued, spot and fees, in that order, each by hand; the spot's step by pricing at both spots."""
     head = "currency: EUR\nunits: 1"

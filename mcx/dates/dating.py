@@ -384,7 +384,8 @@ def _only(dated: DatedContract, live: frozenset[str], idle: frozenset[Place]) ->
         if updates or events:
             moments.append(replace(moment, updates=updates, events=events))
     watches = tuple(watch for watch in dated.watches if watch.running.name in live)
-    today = [said_of_today(dated.contract, dated.history, dated.valuation) for moment in moments if moment.day.date and moment.day.date == dated.valuation]
+    on_today = any(moment.day.date and moment.day.date == dated.valuation for moment in moments)
+    today = [said_of_today(dated.contract, dated.history, dated.valuation)] if on_today else []
     hits = tuple(hit for hit in dated.hits if hit.event.place not in idle)
     by_day = [f"a hit of '{hit.watch.running.name}' counts for the calendar day on which it comes, weekends and "
               f"holidays included; a day runs from one close to the next" for hit in hits if hit.due and hit.days]

@@ -72,7 +72,8 @@ class Methods:
 
 def methods(ready: Ready, market: Market, asked: str, pilot: Sampling | None = None) -> Methods:
     """The valid estimators among those asked for ('auto' for all); with a pilot, likelihood ratios have a smooth
-    stand-in as a control, and tapes are of pairs where its paths are. Raises Refusal where what was asked for is not valid, with the condition that forbids it."""
+    stand-in as a control, and tapes are of pairs where its paths are. Raises Refusal where what was asked for is not
+    valid, with the condition that forbids it."""
     contract, unrolled = ready.dated.contract, ready.unrolled
     price = unrolled.tape.outputs[0]
     tape = without_first_levels(drop_dead_code(replace(unrolled.tape, outputs=(price,), sums=())))

@@ -165,14 +165,17 @@ class Bench:
         band = root_of_squares(there.effects) if there.effects else None
         settled = None if there.model is None else there.model.settled
         rest = None if settled is None else beyond(gap.value, *settled)
-        bands = tuple(_band(name, width, gap.value if rest is None else rest) for name, width in (
+        open_gap = gap if rest is None else replace(gap, value=rest)
+        bands = tuple(_band(name, width, open_gap.value) for name, width in (
             (SAMPLING, gap.half_width), (BID_OFFER, foot.half_width), (INPUTS, band), (TOLERANCE, quote.tolerance)))
         if there.model is not None:
             held = None if settled is None else any(band.holds for band in bands)
             bands = (*bands, model_band(there.model, gap.value, held))
-        far = corner(self.revaluer, there.market, there.effects, gap.value, self.sampling) if there.effects else None
+        far = None
+        if there.effects:
+            far = corner(self.revaluer, there.market, there.effects, open_gap.value, self.sampling)
         threshold = max(foot.half_width or 0.0, quote.tolerance or 0.0)
-        closing = self.closing(there, gap if rest is None else replace(gap, value=rest), meets, threshold)
+        closing = self.closing(there, open_gap, meets, threshold)
         solved = None
         if solve:
             wanted = foot.mid if target is None else target

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 
 from mcx.checked.formula import Previous, walk
 from mcx.checked.market import Curve, Market, StrikeVols
@@ -17,6 +17,7 @@ from mcx.leaves.smile import butterflies
 from mcx.report.results import Martingale
 from mcx.report.settled import Settled, right_sides
 from mcx.report.underlyings import underlyings
+from mcx.report.wording import joined
 from mcx.tape.ops import Op
 from mcx.tape.program import Tape
 
@@ -91,8 +92,6 @@ def assumptions(dated: DatedContract, market: Market, market_map: MarketMap) -> 
                        "forward spread"))
     for name in contract.assets:
         asset = market.assets[name]
-        if asset.by_strike is not None:
-            yield _by_strike(name, asset.by_strike)
         curves.append((f"the vols of {name}", asset.vol, end, "vol"))
         quanto = asset.quanto if contract.conversion.get(name) == "quanto" else None
         drifts = ((asset.dividend_yield, "yields", "forward yield"), (asset.forwards, "forwards", "growth"),
@@ -101,6 +100,7 @@ def assumptions(dated: DatedContract, market: Market, market_map: MarketMap) -> 
             if curve is not None:
                 curves.append((f"the {what} of {name}", curve, end, held))
     curves += [(f"the vols of {rate.name}", rate.vol, end, "vol") for rate in market_map.rates_of_exchange]
+    yield from _by_strike({name: market.assets[name].by_strike for name in contract.assets})
     foreign = {asset.currency for asset in market_map.quotes} - {"", contract.currency}
     curves += [(f"the rates of {name}", market.rates[name], end, "forward rate")
                for name in sorted(foreign & set(market.rates))]
@@ -109,12 +109,20 @@ def assumptions(dated: DatedContract, market: Market, market_map: MarketMap) -> 
             yield f"{what} end at {curve.nodes[-1].label}; the last {held} is held to {day}"
 
 
-def _by_strike(name: str, vols: StrikeVols) -> str:
-    low, high, own = (shown_strike(vols, strike) for strike in (vols.strikes[0], vols.strikes[-1], vols.priced_at))
-    moves = "a strike in percent goes along where a spot moves" if vols.relative else "strikes stay where a spot moves"
-    return (f"the price takes the vols of {name} at {own}, as its market says, and so do sensitivities, ladders, "
-            f"implied inputs, the input band and other readings; vols are linear in strike between the "
-            f"strikes given, flat below {low} and above {high}; the headline's vol stays as it is and {moves}")
+def _by_strike(vols: Mapping[str, StrikeVols | None]) -> Iterator[str]:
+    """Which strike the price takes the vols of, by asset; once for those that take them alike."""
+    alike: dict[tuple[str, str, str, bool], list[str]] = {}
+    for name, own in vols.items():
+        if own is not None:
+            shown = (shown_strike(own, strike) for strike in (own.priced_at, own.strikes[0], own.strikes[-1]))
+            alike.setdefault((*shown, own.relative), []).append(name)
+    for (priced_at, low, high, relative), names in alike.items():
+        moves = "a strike in percent goes along where a spot moves" if relative else "strikes stay where a spot moves"
+        whose = "its" if len(names) == 1 else "their"
+        yield (f"the price takes the vols of {joined(names)} at {priced_at}, as {whose} market says, and so do "
+               f"sensitivities, ladders, implied inputs, the input band and other readings; vols are linear in strike "
+               f"between the strikes given, flat below {low} and above {high}; the headline's vol stays as it is and "
+               f"{moves}")
 
 
 def _ends_before(curve: Curve, time: float) -> bool:

@@ -43,6 +43,7 @@ from mcx.report.verify_results import (
     VerifyTable,
     WorstCorner,
 )
+from mcx.report.wording import joined
 
 LARGE_Z = 4.0
 HELD_BY = {SAMPLING: "the sampling error", BID_OFFER: "half the bid-offer", INPUTS: "the 90 % input band",
@@ -123,13 +124,13 @@ def verdict(bands: Sequence[Band], gap: float, currency: str, rest: float | None
     outside = [HELD_BY[band.name] for band in judged if band.holds is False]
     taken = f"With each strike at its own vol {_size(rest or 0.0, currency)} of the gap of {size}"
     if rest is not None and not inside:
-        return f"{taken} is left, and nothing that was stated holds it: it is outside {_joined(outside, 'and')}."
+        return f"{taken} is left, and nothing that was stated holds it: it is outside {joined(outside, 'and')}."
     if not inside:
-        return f"Nothing that was stated holds the gap of {size}: it is outside {_joined(outside, 'and')}."
-    tail = f", outside {_joined(outside, 'and')}" if outside else ""
+        return f"Nothing that was stated holds the gap of {size}: it is outside {joined(outside, 'and')}."
+    tail = f", outside {joined(outside, 'and')}" if outside else ""
     if rest is not None:
-        return f"{taken} is left; it is inside {_joined(inside, 'and')}{tail}."
-    return f"The gap of {size} is inside {_joined(inside, 'and')}{tail}."
+        return f"{taken} is left; it is inside {joined(inside, 'and')}{tail}."
+    return f"The gap of {size} is inside {joined(inside, 'and')}{tail}."
 
 
 def _size(gap: float, currency: str) -> str:
@@ -155,7 +156,7 @@ def _leads(found: Verification, currency: str) -> Iterator[str]:
         yield ("Explained by the model bracket alone: a dealer who prices the skew may be there; one vol for each "
                "tenor cannot say whether that is right.")
     if found.closing:
-        yield f"Read otherwise it would be closed: {_joined(found.closing, 'or')}."
+        yield f"Read otherwise it would be closed: {joined(found.closing, 'or')}."
     elif found.readings.readings:
         yield "None of the other readings that the definition lists closes it."
     inside = [f"{implied.lever.name} of {implied.lever.subject}" for implied in found.implied
@@ -163,13 +164,10 @@ def _leads(found: Verification, currency: str) -> Iterator[str]:
     if all(implied.lever.width is None for implied in found.implied):
         yield "No uncertainty of any input is stated: what an input would have to be cannot be called plausible or not."
     elif inside:
-        yield f"One input inside its stated uncertainty meets the quote: {_joined(inside, 'or')}."
+        yield f"One input inside its stated uncertainty meets the quote: {joined(inside, 'or')}."
     else:
-        yield "No single input meets the quote inside its stated uncertainty."
-
-
-def _joined(words: Sequence[str], joint: str) -> str:
-    return words[0] if len(words) == 1 else f"{', '.join(words[:-1])} {joint} {words[-1]}"
+        at = "" if found.rest is None else " by the headline's vol"
+        yield f"No single input meets the quote inside its stated uncertainty{at}."
 
 
 def _said(quote: DealerQuote) -> QuoteSaid:
@@ -183,7 +181,8 @@ def _corner(found: Verification) -> WorstCorner | None:
         return None
     price = found.corner.price
     way = price.value - found.compared.value
-    reaches = way * found.gap.value >= 0.0 and abs(way) >= abs(found.gap.value)
+    open_gap = found.gap.value if found.rest is None else found.rest
+    reaches = way * open_gap >= 0.0 and abs(way) >= abs(open_gap)
     return WorstCorner(price.value, price.standard_error, reaches, found.corner.share)
 
 

@@ -72,7 +72,7 @@ def show_verification(result: VerifyResult, page: Page) -> None:
     elif gap.rest is not None and gap.standard_error > 0.0:
         page.line(f"  sampling error: what is left is z = {gap.rest / gap.standard_error:+.1f} standard errors")
     if result.worst_corner is not None:
-        page.line(f"  {corner(result.worst_corner, scale, places)}")
+        page.line(f"  {corner(result.worst_corner, gap, scale, places)}")
     if result.model_bracket:
         show_model(result.model_bracket, scale, result.standard_error, page)
     if result.inputs:
@@ -83,6 +83,7 @@ def show_verification(result: VerifyResult, page: Page) -> None:
     page.heading("what would have to be true, each input alone")
     page.table(("input", "", "value", "error", "move", "inside its doubt"), map(implied_row, result.implied), words=2,
                last=1)
+    page.items(nowhere(result.implied))
     _joint(result, page)
     _readings(result, scale, places, page)
     _money(result, scale, places, page)
@@ -113,11 +114,12 @@ def rank_rows(ranking: Iterable[Ranked], scale: Scale) -> Iterator[tuple[str, ..
                _or_none(each.ask, scale), scale.show(each.gap, 4), ANSWERS[each.explained], funding)
 
 
-def corner(worst: WorstCorner, scale: Scale, places: int) -> str:
+def corner(worst: WorstCorner, gap: Gap, scale: Scale, places: int) -> str:
     """What is said of the worst corner of the inputs."""
     far = "" if worst.share == 1.0 else f" (at {worst.share:.3g} of them: there is no such market further out)"
     return (f"worst corner, every input at the end of its half-width{far}: {scale.show(worst.price, places)} "
-            f"{scale.unit}, which {'reaches' if worst.reaches else 'does not reach'} the quote; never the band")
+            f"{scale.unit}, which {'reaches' if worst.reaches else 'does not reach'} "
+            f"{'the quote' if gap.rest is None else 'as far as what is left of the gap'}; never the band")
 
 
 def _or_none(number: float | None, scale: Scale) -> str:
@@ -138,7 +140,7 @@ def _move(share: float) -> str:
 def implied_row(each: ImpliedInput) -> tuple[str, ...]:
     """Where an input alone makes the model meet the quote, as words."""
     if each.value is None:
-        return each.input, each.asset, "none", "", f"{signed(each.low)} to {signed(each.high)}", NO_NUMBER[each.note]
+        return each.input, each.asset, "none", "", "", NO_NUMBER[each.note]
     if each.input in IN_PERCENT:
         error, number = 100.0 * each.standard_error, 100.0 * each.value
         sign = " %"
@@ -149,6 +151,18 @@ def implied_row(each: ImpliedInput) -> tuple[str, ...]:
     where = f"{value} at {each.tenor}" if each.tenor else value
     inside = {True: "yes", False: "no", None: "not stated"}[each.plausible]
     return each.input, each.asset, where, f"{fixed(error, places)}{sign}", signed(each.move, 2), inside
+
+
+def nowhere(implied: Iterable[ImpliedInput]) -> Iterator[str]:
+    """Of each input that moves the price and cannot meet the quote alone, the range that was looked through; those of one
+    range together."""
+    ranges: dict[tuple[str, str], list[str]] = {}
+    for each in implied:
+        if each.value is None and not NO_NUMBER[each.note]:
+            name = " ".join(filter(None, (each.input, each.asset)))
+            ranges.setdefault((signed(each.low), signed(each.high)), []).append(name)
+    for (low, high), names in ranges.items():
+        yield f"{', '.join(names)}: no move from {low} to {high} meets the quote"
 
 
 def signed(move: float, places: int = 1) -> str:
@@ -177,7 +191,7 @@ def _readings(result: VerifyResult, scale: Scale, places: int, page: Page) -> No
          scale.show(each.difference_standard_error, places), scale.show(each.left, places),
          "yes" if each.closes_gap else "")
         for each in shown), last=1)
-    if any("spot" in step.step for step in result.footing):
+    if result.compared != result.price:
         page.line("  at the spots that the quote states, as is the gap that is left")
     page.items(f"{each.reading}: {each.about}" for each in shown if each.closes_gap)
     unlike = [each for each in result.readings if each not in shown]
@@ -230,7 +244,8 @@ def _money(result: VerifyResult, scale: Scale, places: int, page: Page) -> None:
 def solved(each: SolvedTerm, scale: Scale) -> str:
     """Where a term meets the target, in the unit in which a contract writes it."""
     factor, sign, step = (100.0, " %", "1 %") if each.percent else (1.0, "", "0.01")
-    looked = f"looked for from {factor * each.low:.6g}{sign} to {factor * each.high:.6g}{sign}"
+    low, high = (round(factor * end, 6) for end in (each.low, each.high))  # the end of a range without its end is 0
+    looked = f"looked for from {low:.6g}{sign} to {high:.6g}{sign}"
     stated = f"stated is {factor * each.stated:.6g}{sign}"
     if each.value is None:
         return f"{each.note} ({looked}; {stated})"

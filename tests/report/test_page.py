@@ -488,6 +488,7 @@ def test_what_a_page_asks_for_would_be_seen(pages: dict[str, Path], tmp_path: Pa
     assert "http://example.org/x.png" in printed(written(tmp_path, bare, "bare.html"), tmp_path).asked
 
 
+AS_PRINTED = 718  # a window as wide as a printed page of A4 between its margins
 MEASURE = """<script>
 const found = [];
 for (const svg of document.querySelectorAll('svg')) {
@@ -501,6 +502,11 @@ for (const svg of document.querySelectorAll('svg')) {
           && there.top + 3 < box.bottom - 3) found.push(`${title}: '${words}' runs into '${other}'`);
   });
 }
+for (const section of document.querySelectorAll('section')) {
+  const end = section.getBoundingClientRect().right, table = section.querySelector('table');
+  if (table && getComputedStyle(section).overflowX == 'visible' && table.getBoundingClientRect().right > end + 1)
+    found.push(`${section.querySelector('h3')?.textContent}: the table is wider than its column`);
+}
 const page = document.documentElement;
 if (page.scrollWidth > innerWidth + 1) found.push(`the page is ${page.scrollWidth} wide, the window ${innerWidth}`);
 const style = getComputedStyle(document.body);
@@ -509,8 +515,11 @@ document.title = JSON.stringify({found, ink: style.color, paper: style.backgroun
 
 
 def measured(page: Path, folder: Path, width: int, *more: str) -> dict:
-    """Where words of pictures meet or are cut, and the inks, as a browser lays a page out in a window."""
+    """Where words of pictures meet or are cut and tables leave their column, and the inks, as a browser lays a page out
+    in a window, or on paper."""
     text = re.sub("<meta http-equiv[^>]*>", "", page.read_text(encoding="utf-8")).replace("</body>", MEASURE)
+    if width == AS_PRINTED:
+        text = text.replace("@media screen", "@media not all").replace("@media print", "@media all")
     done = browse(written(folder, text, "measured.html"), folder, f"--window-size={width},900", "--dump-dom", *more)
     return json.loads(unescape(re.search("<title>(.*?)</title>", done.stdout, re.DOTALL)[1]))
 
@@ -522,6 +531,27 @@ def test_words_do_not_meet(pages: dict[str, Path], verb: str, tmp_path: Path):
     light, dark = measured(pages[verb], tmp_path, 1280), measured(pages[verb], tmp_path, 500, DARK)
     assert light == {"found": [], "ink": "rgb(26, 26, 26)", "paper": "rgb(255, 255, 255)"}
     assert dark == {"found": [], "ink": "rgb(236, 236, 236)", "paper": "rgb(22, 22, 22)"}
+
+
+@needs_browser
+@pytest.mark.parametrize("verb", VERBS)
+def test_tables_keep_to_their_column_on_paper(pages: dict[str, Path], verb: str, tmp_path: Path):
+    assert measured(pages[verb], tmp_path, AS_PRINTED)["found"] == []
+
+
+@needs_browser
+def test_inputs_that_cannot_meet_a_quote_on_paper(tmp_path: Path):
+    """Of two assets, which have pairs with long names and a range for each; and what a wider row would do is seen."""
+    page = tmp_path / "page.html"
+    assert mcx("verify", written(tmp_path, EXCHANGE), *PATHS, "--report", page).code == 1
+    assert 1 <= printed(page, tmp_path).pages <= 2
+    for width in (1280, 500, AS_PRINTED):
+        assert measured(page, tmp_path, width)["found"] == []
+    text = page.read_text(encoding="utf-8")
+    start = text.index("correlation harbour/lantern</td>")
+    wide = text[start:].replace("<td></td>", f"<td>{4 * '-1,234.5 % to '}</td>", 1)
+    found = measured(written(tmp_path, text[:start] + wide, "wide.html"), tmp_path, AS_PRINTED)["found"]
+    assert found == ["what would have to be true, each input alone: the table is wider than its column"]
 
 
 @needs_browser

@@ -19,8 +19,8 @@ from mcx.report.verify_view import (
     footed,
     implied_row,
     money_rows,
+    nowhere,
     rest_row,
-    signed,
     solved,
 )
 
@@ -75,7 +75,7 @@ def _ladder(result: VerifyResult, scale: Scale, places: int) -> Iterator[Picture
     yield Table("in numbers", ("", f"half-width, {scale.unit}", "holds it"), tuple(
         (band.name, "not stated" if band.half_width is None else scale.show(band.half_width, places),
          ANSWERS[band.holds]) for band in result.bands), tail=2,
-        note="" if result.worst_corner is None else corner(result.worst_corner, scale, places))
+        note="" if result.worst_corner is None else corner(result.worst_corner, result.gap, scale, places))
 
 
 def _implied(result: VerifyResult) -> Iterator[Picture | Table | Notes]:
@@ -90,10 +90,8 @@ def _implied(result: VerifyResult) -> Iterator[Picture | Table | Notes]:
         yield Picture(title, moves(title, said, drawn, "half-widths; shaded: inside the band"))
     rows, left = cut([_told(each, halves.get((each.input, each.asset))) for each in result.implied], MOST_IMPLIED)
     heads = ("input", "value", "error", "move", "± stated", "inside")
-    nowhere = [f"{_named(each)}: no move from {signed(each.low)} to {signed(each.high)} meets the quote"
-               for each in result.implied if each.value is None and not implied_row(each)[-1]]
     yield Table("what would have to be true, each input alone", heads, rows, tail=5,
-                note="; ".join(filter(None, (left, *nowhere))))
+                note="; ".join(filter(None, (left, *nowhere(result.implied)))))
     if result.joint is not None:
         found = (f"{' '.join(filter(None, (each.input, each.asset)))} by {each.half_widths:+.2f} of its half-width"
                  for each in result.joint.moves)
@@ -101,9 +99,9 @@ def _implied(result: VerifyResult) -> Iterator[Picture | Table | Notes]:
 
 
 def _told(each: ImpliedInput, half: float | None) -> tuple[str, ...]:
-    """A row of the page, which is narrower than a terminal: the input in one cell, the range of no solution below."""
+    """A row of the page, which is narrower than a terminal: the input in one cell."""
     _, _, value, error, move, inside = implied_row(each)
-    return _named(each), value, error, "" if each.value is None else move, _move(half), inside
+    return _named(each), value, error, move, _move(half), inside
 
 
 def _named(each: ImpliedInput) -> str:
