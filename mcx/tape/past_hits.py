@@ -1,8 +1,8 @@
 """Hits of the past: on which day of its watch a flag turned, as far as fixings and statements tell, and what is owed.
 
 A statement that a flag held says that it turned by then, one that it did not says that it turned later. Between the two
-may lie more days than one: then the day is not known, which does no harm where what is still owed is the same on each of
-them, and where nothing that counts happens between them.
+may lie more days than one: then the day is not known, which does no harm where what is still owed is the same on each
+of them, and where nothing that counts happens between them.
 """
 
 from __future__ import annotations
@@ -16,7 +16,7 @@ from mcx.checked.payoff import Action, Assign, End, Event, Pay
 from mcx.dates.dated_contract import DatedContract, DatedHit, Day
 from mcx.tape.builder import Builder
 from mcx.tape.formulas import Scene, Unreadable, Values
-from mcx.tape.hits import Due, Span
+from mcx.tape.hits import Due, Span, paid_at
 from mcx.tape.program import Leaf, LeafKind
 from mcx.tape.running import Watched
 
@@ -76,6 +76,11 @@ class PastHit:
         """When an amount is paid, whichever of the days it was."""
         day = self.hit.due[pay][self.days[-1]]
         return Due(builder.leaf(Leaf(LeafKind.DISCOUNT, end=day.time)), builder.constant(day.time), day, (day.time,))
+
+    def ends(self, dated: DatedContract, builder: Builder) -> int:
+        """The time to which a contract has lived that ended there, as `Hits.ends`."""
+        due = [hit.due[pay][self.days[-1]].time for hit, pay in paid_at(dated.hits, self.hit)]
+        return builder.constant(max(due or [self.last.time]))
 
     def scene(self, builder: Builder, dated: DatedContract) -> Scene:
         """What may be read there: terms, and `years` where the day is known."""
