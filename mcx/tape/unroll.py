@@ -7,7 +7,7 @@ from here.
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass
 
 from mcx.dates.dated_contract import DatedContract, Day
@@ -19,7 +19,7 @@ from mcx.tape.ledger import Payment
 from mcx.tape.observations import Observations
 from mcx.tape.ops import Op
 from mcx.tape.passes import drop_dead_code
-from mcx.tape.program import Instruction, LevelKey, Output, Tape
+from mcx.tape.program import Bound, Instruction, LevelKey, Output, Tape
 from mcx.tape.running import Watched
 from mcx.tape.state import State
 from mcx.tape.steps import PLAIN, SAME_TIME, Grid, Makeup, expand_levels
@@ -31,6 +31,10 @@ UNKNOWN_SUM = ("an asset with cash dividends that is converted at the rate of th
                "its law between two dates is not known; name the dates on which it is watched")
 UNKNOWN_MOMENT = ("the moment of a hit is not known where cash dividends are still to come or a dividend on an ex date "
                   "may bring the hit about; name the dates on which the level is watched")
+
+
+BESIDE_BOUNDS = ("the moment of this hit is not known at a time at which levels of several assets are watched together, "
+                 "which is done in finer and finer steps; watch one of them on dates")
 
 
 @dataclass(frozen=True, slots=True)
@@ -91,7 +95,7 @@ def unroll(
     if faults:
         return _refused(faults)
     weighted = weigh(observed, fixed_values(observed, dated.contract), everything_drawn, makeup.leaders)
-    if faults := conflicts(weighted.tape):
+    if faults := [*conflicts(weighted.tape), *_moments_in_finer_steps(weighted.tape)]:
         return _refused(faults)
     notes = _notes(walk, weighted, makeup)
     if given:
@@ -113,6 +117,15 @@ def _notes(walk: Walk, weighted: Weighted, makeup: Makeup) -> tuple[WatchNote, .
             law = law if sides else "unread"
             found.append(WatchNote(name, tuple(sides), law, bool(weighted.drawn & set(state.barriers))))
     return tuple(found)
+
+
+def _moments_in_finer_steps(tape: Tape) -> Iterator[Fault]:
+    """Moments of hits in stretches that may be cut, where they are drawn as a part of one step."""
+    cut = {(one.key.start, one.key.time) for step in tape.instructions
+           if step.op is Op.UNHIT and step.payload.bound is not Bound.EXACT for one in step.payload.barriers}
+    for step in tape.instructions:
+        if step.op is Op.MOMENT and any(start < step.payload.time and step.payload.start < end for start, end in cut):
+            yield Fault(step.place, BESIDE_BOUNDS)
 
 
 def _refused(faults: Iterable[Fault]) -> Unrolled:

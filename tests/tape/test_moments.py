@@ -69,6 +69,17 @@ def test_what_is_a_sum_of_moments_alone_is_not(what: str):
     assert not unroll(dated, nodes=()).faults
 
 
+def test_a_moment_is_refused_where_steps_may_be_cut():
+    """Levels of two assets watched together have a chance between bounds, for which steps are cut; a moment is a part
+    of one of them. Apart in time it keeps its step."""
+    what = "first + (1 if up and down else 0)"
+    dated, _ = date_contract(request_of(kept(what, "lantern")).contracts[0], None)
+    (fault,) = unroll(dated, nodes=()).faults
+    assert fault.place.line == 14 and "in finer and finer steps" in fault.text
+    early, late = "{continuous: [0y, 0.5y]}", "{continuous: [0.5y, 1y]}"
+    assert prepare(kept(what, "lantern", early, late)).price(1 << 10, SEED).error > 0.0
+
+
 def test_moments_of_hits_apart_in_time_share_their_draws():
     """One normal and one uniform serve every moment, so two of them have no product even where they cannot meet."""
     text = kept("first * other", early="{continuous: [0y, 0.5y]}", late="{continuous: [0.5y, 1y]}")
