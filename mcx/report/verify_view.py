@@ -154,8 +154,7 @@ def implied_row(each: ImpliedInput) -> tuple[str, ...]:
 
 
 def nowhere(implied: Iterable[ImpliedInput]) -> Iterator[str]:
-    """Of each input that moves the price and cannot meet the quote alone, the range that was looked through; those of one
-    range together."""
+    """Which inputs move the price and cannot meet the quote alone, with the range that was looked through."""
     ranges: dict[tuple[str, str], list[str]] = {}
     for each in implied:
         if each.value is None and not NO_NUMBER[each.note]:
