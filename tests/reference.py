@@ -477,18 +477,22 @@ class Reference:
             start = (0.0, *self.grid)[step]
             moment = start + (time - start) * moment_of_hit(d0, d1, variance, *self.pair)
             levels = tuple(level if k == asset else math.nan for k in range(len(levels)))
-        day, due = Day(moment), dict.fromkeys(hit.due, Day(moment))
+        day, number = Day(moment), 0
         if hit.days:  # a day ends with its close
             number = next(k for k, one in enumerate(hit.days) if one.time >= moment - SAME_TIME)
-            day, due = hit.days[number], {pay: days[number] for pay, days in hit.due.items()}
-        else:
+            day = hit.days[number]
+
+        def due_of(hit: DatedHit) -> dict[Pay, Day]:
             pays = [one for one in (*hit.event.then, *hit.event.otherwise) if isinstance(one, Pay)]
-            due = {pay: hit.due[pay][0] if pay in hit.due else day for pay in pays}
+            return {pay: hit.due[pay][number] if pay in hit.due else day for pay in pays}
+
         occasion = Occasion(day, "", 1, 1, math.nan, day.time - self.dated.start.time, {})
         walk.look(occasion, hit.event, plain(levels))
-        ended = walk.happen(DatedEvent(hit.event, occasion, due))
-        if ended and math.isnan(walk.result.life):
-            walk.result.life = day.time
+        ended = walk.happen(DatedEvent(hit.event, occasion, due_of(hit)))
+        if ended and math.isnan(walk.result.life):  # as on a date
+            same = [one for one in self.dated.hits if one.watch == hit.watch]
+            due = [paid.time for one in same[: same.index(hit) + 1] for paid in due_of(one).values()]
+            walk.result.life = max(due, default=day.time)
         return ended
 
     def turning_level(self, walk: Walk, running: Running, asset: int, levels: tuple[float, ...]) -> float:

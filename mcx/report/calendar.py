@@ -60,6 +60,15 @@ def _lines(dated: DatedContract, state: State | None) -> Iterator[tuple[float, C
                     paid = (each.due[action], action.leg)
                     payments[paid] = min(payments.get(paid, doubt), doubt, key=DOUBTS.index)
             may_have_ended |= any(isinstance(action, End) for action in actions)
+    came = {past.event for past in state.events} if state else set()
+    for hit in dated.hits:
+        if hit.watch.end.time >= 0.0 and hit.event not in came:
+            for action in settled.actions(hit.event):
+                if len(days := sorted(set(hit.due.get(action, ())), key=lambda day: day.time)) > 1:
+                    yield days[-1].time, CalendarLine(f"until {days[-1]}", contract.title, "payment",
+                                                      f"{action.leg}{DOUBTFUL}")
+                elif days:
+                    payments.setdefault((days[0], action.leg), DOUBTFUL)
     for (day, leg), doubt in payments.items():
         if (day, leg) in {(each.due, each.pay.leg) for each in owed}:
             continue

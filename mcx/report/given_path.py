@@ -62,7 +62,18 @@ class _Reader:
         }
         self.missing: dict[int, set[float]] = {}
         self.used: set[tuple[int, float]] = set()
+        self._add_todays()
         self.watched: dict[tuple[int, float], float] = {}  # asset, start -> end
+
+    def _add_todays(self) -> None:
+        """The fixings of the valuation date, which a watch goes on from, where the file has no level of that day."""
+        history = self.dated.history
+        for number, given in self.given.items():
+            fixed = history.level(number, Day(0.0, history.valuation))
+            if fixed is not None and not any(abs(time) <= SAME_TIME for time, _ in given):
+                given.append((0.0, fixed / history.scale[number] if history.scale else fixed))
+                given.sort()
+                self.used.add((number, 0.0))
 
     def level(self, op: Op, key: LevelKey) -> float:
         """The level that a key reads: on its day, or the extreme of all that are given within its stretch."""

@@ -59,14 +59,14 @@ class Scene:
     """What names mean while one formula is read: the spots, the date, the running values, and what each `previous`
     of this running value or event remembers (by identity of its node; None on the first date).
 
-    At the moment of a hit there is no date: `moment` is the years from the start as a value of the tape, `part` which
-    part of the stretch has passed, and `known` the levels of single assets."""
+    At the moment of a hit there is no date: `moment` gives the years from the start as a value of the tape, `part` is
+    which part of the stretch has passed, and `known` are the levels of single assets."""
 
     spot: Callable[[Name], Values]
     running: Callable[[Name], Values]
     occasion: Occasion | None = None
     remembered: dict[int, Values] | None = None
-    moment: int | None = None
+    moment: Callable[[], int] | None = None
     part: int | None = None
     known: dict[int, int] = field(default_factory=dict)
 
@@ -207,7 +207,7 @@ class Formulas:
         if name in self.lets:
             return self.read(self.lets[name], scene)
         if name == "years" and scene.moment is not None:
-            return (scene.moment,)
+            return (scene.moment(),)
         if name not in DATE_NAMES or name in self._per:
             return self.term(name, formula.place, scene.occasion)
         known = getattr(scene.occasion, name) if scene.occasion else math.nan

@@ -10,7 +10,7 @@ from __future__ import annotations
 import datetime
 import math
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from mcx.checked.formula import Name
 from mcx.checked.payoff import End, Pay
@@ -138,7 +138,8 @@ class Hits:
         """What a formula may read at the moment at which a flag turns in a stretch."""
         assets = range(len(self.dated.contract.assets))
         if stretch.start == stretch.end:
-            return Scene(lambda _: self.observations.all(stretch.day), _no_running, moment=self._years(stretch, None))
+            return Scene(lambda _: self.observations.all(stretch.day), _no_running,
+                         moment=lambda: self._years(stretch, None))
         asset, level = self._barrier(stretch, flag)
         key = LevelKey(asset, stretch.end, stretch.start)
         part = self.builder.keyed(Op.MOMENT, (level,), key, stretch.hit.event.place)
@@ -151,7 +152,7 @@ class Hits:
                                              f"write 'of(spot, {self.dated.contract.assets[asset]})'")
             return (level,)
 
-        return Scene(spot, _no_running, moment=self._years(stretch, part), known={asset: level}, part=part)
+        return Scene(spot, _no_running, moment=lambda: self._years(stretch, part), known={asset: level}, part=part)
 
     def due(self, stretch: Stretch, pay: Pay, part: int | None) -> Due:
         """When an amount is paid that is owed at a moment of a stretch."""
@@ -166,6 +167,13 @@ class Hits:
         times = [constant(day.time) for day in days]
         return Due(self._by_day(stretch, part, factors), self._by_day(stretch, part, times),
                    max(days, key=lambda day: day.time), tuple(day.time for day in days))
+
+    def ends(self, stretch: Stretch, part: int | None) -> int:
+        """The time to which a contract lives that ends at a moment of a stretch: when the last of what its events up
+        to this one owe is paid, else the moment itself."""
+        due = [self.due(replace(stretch, hit=hit), pay, part).time
+               for hit, pay in paid_at(self.dated.hits, stretch.hit)]
+        return self.builder.fold(Op.MAX, due) if due else self.time(stretch, part)
 
     def time(self, stretch: Stretch, part: int | None) -> int:
         """The time of the hit itself, or that of its day."""
@@ -225,6 +233,13 @@ class Hits:
             raise Unreadable(stretch.hit.event.at.place, text.format(*[running.name] * 2))
         barrier, level = next(iter(found))
         return barrier.key.asset, level
+
+
+def paid_at(hits: Sequence[DatedHit], last: DatedHit) -> Iterator[tuple[DatedHit, Pay]]:
+    """What events at one hit pay, those up to the last one, with the hit as each has it."""
+    same = [hit for hit in hits if hit.watch == last.watch]
+    for hit in same[: same.index(last) + 1]:
+        yield from ((hit, action) for action in (*hit.event.then, *hit.event.otherwise) if isinstance(action, Pay))
 
 
 class _Levels:

@@ -7,6 +7,7 @@ from bisect import bisect_left
 from collections.abc import Iterable
 from dataclasses import dataclass
 
+from mcx.checked.contract import Known
 from mcx.checked.formula import Name
 from mcx.checked.payoff import At, Running
 from mcx.dates.dated_contract import Day, Watch
@@ -143,7 +144,7 @@ class Watched:
         history, running = self.observations.history, self.watch.running
         today = Day(0.0, history.valuation)
         day = min(day, today, key=_time)
-        stated = history.stated.get(running.name, {})
+        stated = self._stated()
         if running.name in history.stated and not stated:
             return 0.0  # what the contract says of it is at fault
         fixed = self._by_fixings(day)
@@ -164,10 +165,15 @@ class Watched:
         at = running.at
         ends = (at.name,) if isinstance(at, At) else (at.start.name, at.end.name)
         placed = [self.formulas.contract.terms[name].place for name in ends if name in self.formulas.contract.terms]
+        by = " or ".join(dict.fromkeys((str(self._needed(day)), str(day))))
         raise Unreadable(placed[0] if placed else running.place, (
             f"'{running.name}' is watched all the time from {self.watch.start}, which fixings cannot tell; the "
-            f"contract must say what had happened by {self._needed(day)} or {day}, as 'happened: "
-            f"{{{running.name}: {{{day}: {what}}}}}'"))
+            f"contract must say what had happened by {by}, as 'happened: {{{running.name}: {{{day}: {what}}}}}'"))
+
+    def _stated(self) -> dict[datetime.date, Known]:
+        """What the contract states of the watch, by date in order: after its end it stays as it was then."""
+        stated, end = self.observations.history.stated.get(self.watch.running.name, {}), self.watch.end.date
+        return {min(date, end): known for date, known in sorted(stated.items())}
 
     def _needed(self, day: Day) -> datetime.date:
         """The earliest date of a statement that holds on a day: the day itself, or before the close of the valuation
@@ -179,7 +185,7 @@ class Watched:
         """Between which dates a flag turned, as far as statements and fixings up to the valuation date tell: after the
         first (None: since the watch began) and by the second. None where they do not say that it has."""
         history, watch = self.observations.history, self.watch
-        stated, turned = history.stated.get(watch.running.name, {}), float(watch.running.how == "ever")
+        stated, turned = self._stated(), float(watch.running.how == "ever")
         if watch.start.date is None or watch.start.time >= 0.0:
             return None
         last = min(watch.end.date, history.valuation)

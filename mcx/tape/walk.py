@@ -149,15 +149,18 @@ class Walk:
         condition = self.formulas.one(event.condition, scene) if event.condition else self.builder.constant(1.0)
         self._carry_out(event, stretch.day, turns, condition, scene,
                         due=lambda pay: self.hits.due(stretch, pay, scene.part),
-                        otherwise_due=lambda: self.hits.time(stretch, scene.part))
+                        otherwise_due=lambda: self.hits.ends(stretch, scene.part))
 
     def _past_hit(self, past: PastHit) -> None:
-        event, scene = past.event(self.dated.contract), past.scene(self.builder, self.dated.start)
+        event, scene = past.event(self.dated), past.scene(self.builder, self.dated)
         constant = self.builder.constant
-        condition = self.formulas.one(event.condition, scene) if event.condition else constant(1.0)
+        condition = constant(1.0)
+        if event.condition:
+            condition = self._settled(self.formulas.one(event.condition, scene), past.last)
         self._carry_out(event, past.day, constant(1.0), condition, scene, due=lambda pay: past.due(pay, self.builder),
-                        otherwise_due=lambda: constant(past.last.time))
-        self.state.events.append(PastEvent(past.hit.event, past.day, bool(self.builder.number(condition))))
+                        otherwise_due=lambda: past.ends(self.dated, self.builder))
+        held = self.builder.number(condition)
+        self.state.events.append(PastEvent(past.hit.event, past.day, None if held is None else bool(held)))
 
     def _newly(self, before: int, after: int, place: Place) -> int:
         """Whether a flag holds that did not before."""

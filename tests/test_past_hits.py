@@ -1,0 +1,166 @@
+"""Hits of the past whose day is told, or not, between dates on which something else happens."""
+
+from __future__ import annotations
+
+from datetime import date
+from math import exp
+from pathlib import Path
+
+import pytest
+from front_door import written
+from seasoned import faults
+
+import mcx as package
+
+OWN = """payoff: own
+assets: 1
+terms: {barrier: {type: level}, watched: {type: watch}, seen: {type: dates}, maturity: {type: date}}
+running:
+  touched: {ever: spot >= barrier, at: watched}
+  kept: {start: 0}
+events:
+EVENTS
+---
+contract: trade
+currency: EUR
+units: 1
+assets: [harbour]
+start: 2026-12-01
+settlement: 2 business days
+calendar: {holidays: none, roll: following}
+payoff: own
+terms:
+  barrier: 120
+  watched: {continuous: [2026-12-01, 2027-06-01]}
+  seen: [2027-02-01, 2027-02-15]
+  maturity: 2027-06-15
+happened: {touched: STATED}
+---
+market: 2027-03-03
+rates: {EUR: 2%}
+assets: {harbour: {spot: 100, currency: EUR, yield: 0%, vol: 20%}}
+"""
+WIDE = "{2027-01-20: false, 2027-02-18: true}"
+COUPONS = """  - {at: seen, pay: 3, due: maturity}
+  - {at: {once: touched}, if: barrier > 0, then: [{pay: 10}, end]}"""
+MARKED = """  - {at: {once: touched}, set: {kept: 1}}
+  - {at: seen, if: kept == 0, then: [{pay: 5, due: maturity}]}"""
+TWO = """  - {at: {once: touched}, if: barrier > 0, then: [{pay: 10}, {pay: 7, due: maturity}]}"""
+CALLED = """  - {at: seen, if: barrier > 150, then: [end]}
+  - {at: {once: touched}, pay: 7, due: maturity}"""
+YEARS = """  - {at: {once: touched}, if: years < 0.2, then: [{pay: 5, due: maturity}],
+     else: [{pay: 2, due: maturity}, end]}"""
+
+
+def on(day: str) -> str:
+    """The statements that the hit came on a day of February 2027."""
+    return f"{{2027-02-{int(day) - 1:02}: false, 2027-02-{day}: true}}"
+
+
+def text(events: str, stated: str) -> str:
+    return OWN.replace("EVENTS", events).replace("STATED", stated)
+
+
+def test_what_is_sure_is_owed_where_the_day_is_not_known(tmp_path: Path):
+    """Of two amounts of one hit the one is paid, on whichever day it came, and the other falls due at maturity."""
+    for stated in (WIDE, on("18")):
+        result = package.price(written(tmp_path, text(TWO, stated)), paths=64)
+        assert [(each.date, each.amount) for each in result.owed] == [("2027-06-15", 7.0)]
+        lag = (date(2027, 6, 15) - date(2027, 3, 3)).days
+        assert result.price == pytest.approx(7.0 * exp(-0.02 * lag / 365), rel=1e-14)
+
+
+@pytest.mark.parametrize(("events", "day", "owed"), [
+    (COUPONS, "16", [3.0, 3.0]), (COUPONS, "15", [3.0]), (MARKED, "02", [5.0]), (MARKED, "16", [5.0, 5.0]),
+    (YEARS, "02", [5.0]), (YEARS, "18", [2.0]), (CALLED, "02", [7.0]),
+])
+def test_a_day_that_decides_what_is_owed(tmp_path: Path, events: str, day: str, owed: list[float]):
+    """It is asked for: coupons of dates before the hit that ends the contract are owed, an amount of a hit before a
+    call is, and so on; on the day of the hit the hit is first."""
+    result = package.price(written(tmp_path, text(events, on(day))), paths=64)
+    assert [each.amount for each in result.owed] == owed
+    (fault,) = faults(tmp_path, text(events, WIDE))
+    assert "'touched' came true after 2027-01-20 and by 2027-02-18, and what is owed hangs on the day" in fault
+
+
+def test_a_condition_of_terms_is_settled(tmp_path: Path):
+    """The hit happened, and its end with it."""
+    file = written(tmp_path, text(COUPONS, on("16")))
+    assert package.price(file, paths=64).ended == "2027-02-16"
+    assert ("2027-02-16", "yes") in [(each.date, each.happened) for each in package.readback(file).state.past]
+
+
+@pytest.mark.parametrize(("last", "worth"), [("2027-06-02: true", 1.0), ("2027-06-02: false", 0.0)])
+def test_what_is_stated_after_a_watch_holds_of_its_end(tmp_path: Path, last: str, worth: float):
+    """Nothing changes after it: true on a later day says that it turned on the last day at the latest."""
+    later = text("  - {at: {once: touched}, pay: 1}", f"{{2027-05-31: false, {last}}}")
+    result = package.price(written(tmp_path, later.replace("market: 2027-03-03", "market: 2027-06-02")), paths=64)
+    assert result.price == pytest.approx(worth * exp(-0.02 / 365), rel=1e-14)
+    assert [each.observed for each in result.owed] == ["2027-06-01"] * int(worth)
+
+
+TOUCH = """contract: touch
+currency: EUR
+units: 1
+assets: [harbour]
+start: 2026-12-01
+settlement: 2 business days
+calendar: {holidays: none, roll: following}
+payoff: touch_at_hit
+terms: {direction: up, barrier: 120, cash: 5, watched: WATCHED}
+---
+market: 2027-03-03
+rates: {EUR: 2%}
+assets: {harbour: {spot: 100, currency: EUR, yield: 0%, vol: 20%}}
+"""
+ALWAYS = TOUCH.replace("WATCHED", "{continuous: [2026-12-01, 2027-06-01]}")
+NOT_YET = "happened: {touched: {2027-03-02: false}}\n---"
+TODAY = "fixings: {harbour: {2027-03-03: LEVEL}}\n"
+
+
+def test_a_touch_lives_until_its_cash_is_paid(tmp_path: Path):
+    """As one watched at closes does: on the day after the hit the settlement is a day away."""
+    watched = ALWAYS.replace("---", "happened: {touched: {2027-03-01: false, 2027-03-02: true}}\n---")
+    closes = TOUCH.replace("WATCHED", "[2027-03-02, 2027-06-01]") + "fixings: {harbour: {2027-03-02: 121}}\n"
+    for text in (watched, closes):
+        result = package.price(written(tmp_path, text), paths=64)
+        assert result.expected_life == pytest.approx(1 / 365, rel=1e-12)
+
+
+def test_a_sure_touch_to_come_lives_until_its_cash_is_paid(tmp_path: Path):
+    """A touch all but sure on the first day after the valuation date, a Wednesday: paid two business days later."""
+    near = ALWAYS.replace("---", NOT_YET).replace("spot: 100", "spot: 119.9999999").replace("2027-06-01", "2027-03-04")
+    assert package.price(written(tmp_path, near), paths=64).expected_life == pytest.approx(5 / 365, rel=1e-6)
+
+
+@pytest.mark.parametrize(("happened", "more", "paid"), [
+    (NOT_YET, "", [("until 2027-06-03", "payment (if it is due)")]),
+    ("happened: {touched: {2027-03-01: false, 2027-03-02: true}}\n---", "", [("2027-03-04", "payment (owed)")]),
+    (NOT_YET, TODAY.replace("LEVEL", "121"), [("2027-03-05", "payment (owed)")]),
+])
+def test_the_calendar_lists_what_a_hit_may_pay(tmp_path: Path, happened: str, more: str, paid: list[tuple[str, str]]):
+    """Until the last day on which it may fall due; once it came, on its day."""
+    found = package.readback(written(tmp_path, ALWAYS.replace("---", happened) + more), calendar=True)
+    assert [(each.date, each.of) for each in found.lines if each.kind == "payment"] == paid
+
+
+def test_the_calendar_lists_what_a_hit_may_pay_on_a_date(tmp_path: Path):
+    """An amount with a date of its own is due on it; a second one of the same hit, long paid, is not listed again."""
+    found = package.readback(written(tmp_path, text(TWO, "{2027-03-02: false}")), calendar=True)
+    assert [(each.date, each.of) for each in found.lines if each.kind == "payment"] == [
+        ("until 2027-06-03", "payment (if it is due)"), ("2027-06-15", "payment (if it is due)")]
+    found = package.readback(written(tmp_path, text(TWO, WIDE)), calendar=True)
+    (paid,) = (each for each in found.lines if each.kind == "payment")
+    assert (paid.date, paid.of) == ("2027-06-15", "payment (owed)")
+
+
+@pytest.mark.parametrize(("today", "factor", "paid"), [
+    (110, 1, "2027-05-05"), (121, 1, "2027-03-05"), (55, 2, "2027-05-05")])
+def test_given_levels_go_on_from_the_fixing_of_the_valuation_date(tmp_path: Path, today: int, factor: int, paid: str):
+    """It is a level like those of the file, in which it need not stand; adjusted as those are."""
+    levels = tmp_path / "levels.yaml"
+    levels.write_text(f"harbour: {{2027-05-03: {122 // factor}, 2027-06-01: {90 // factor}}}\n")
+    adjusted = f"adjustments: {{harbour: {{2027-03-01: {factor}}}}}\n" if factor > 1 else ""
+    case = ALWAYS.replace("---", adjusted + NOT_YET) + TODAY.replace("LEVEL", str(today))
+    found = package.readback(written(tmp_path, case), path=levels).path
+    assert [(each.date, each.amount) for each in found.payments] == [(paid, 5.0)]
