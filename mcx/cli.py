@@ -351,10 +351,14 @@ def _greeks_view(result: Result, page: Page) -> None:
     from mcx.report.greek_results import GreeksTable
     from mcx.report.greek_view import show_greeks
 
-    for number, each in enumerate(result.contracts if isinstance(result, GreeksTable) else (result,)):
+    several = isinstance(result, GreeksTable)
+    for number, each in enumerate(result.contracts if several else (result,)):
         if number:
             page.line()
         show_greeks(each, page)
+    if several and result.not_valued:
+        page.line()
+        page.line(f"interrupted: not valued are {', '.join(result.not_valued)}", style="bold")
 
 
 def _verify_view(result: Result, page: Page) -> None:

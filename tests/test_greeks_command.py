@@ -277,6 +277,25 @@ def test_interrupted_with_the_estimates_so_far(call: Path, pressed, tmp_path: Pa
         assert each == expected[key]
 
 
+def test_interrupted_between_contracts(tmp_path: Path, monkeypatch: pytest.MonkeyPatch):
+    """The contract that is whole, and the title of the one that had not begun."""
+    from mcx.estimators import greeks
+
+    both = written(tmp_path, CALL + "---\n" + CALL.replace("contract: Call", "contract: Another") + MARKET, "both.yaml")
+    whole = greeks.sensitivities
+
+    def pressed_at_another(ready, *given, **more):
+        if ready.dated.contract.title == "Another":
+            raise KeyboardInterrupt
+        return whole(ready, *given, **more)
+
+    monkeypatch.setattr(greeks, "sensitivities", pressed_at_another)
+    outcome = mcx("greeks", both, "--paths", 4096)
+    assert outcome.code == 130 and outcome.out.startswith("Call (european)\n")
+    assert outcome.out.rstrip().endswith("\ninterrupted: not valued are Another")
+    assert mcx("greeks", both, "--paths", 4096, "--json").json["not_valued"] == ["Another"]
+
+
 def test_interrupted_among_the_revaluations(call: Path, pressed):
     """The sensitivities are whole; of what came after only what was done is shown."""
     pressed(PILOT + 32 + 40)

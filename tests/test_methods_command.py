@@ -14,6 +14,7 @@ from front_door import CALL, EXAMPLES, MARKET, SEED, mcx, refused, written
 
 import mcx as package
 from mcx.estimators.reduction.sample import Sampled, Sampler
+from mcx.report.method_view import method_row
 
 METHOD_KEYS = {"method", "price", "standard_error", "paths", "seconds", "variance_ratio", "cost_ratio", "efficiency", "z",
                "seconds_to_1bp"}
@@ -75,6 +76,14 @@ def test_the_table_reads(average: Path):
     out = mcx("methods", average, "--seconds", "0.02").out
     for text in ("the most efficient first", "variance ratio", "sobol-bridge", "geometric average", "to 1 bp"):
         assert text in out
+
+
+def test_no_run_is_shorter_than_a_path(average: Path):
+    """What a fraction of a path would do says so; a price of 0 has no basis points."""
+    line = package.methods(average, paths=4096).methods[0]
+    cells = [list(method_row(replace(line, paths_to_1bp=paths, seconds_to_1bp=2.5), 1.0, False))[-1]
+             for paths in (12.0, 0.2, 0.0)]
+    assert cells == ["2.5", "one path", ""]
 
 
 @pytest.mark.parametrize("suffix", ["png", "svg"])

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import re
 from functools import cache
 from pathlib import Path
 
@@ -170,6 +171,23 @@ def test_a_price_without_a_model_is_what_a_quote_is_held_against(tmp_path, price
     z = rest / found["gap"]["standard_error"]
     for words in ("left of it", "what may hold what is left of the gap", f"what is left is z = {z:+.1f}"):
         assert words in text, words
+    assert re.search(r"model bracket [0-9.]+ taken off", text)
+
+
+def test_ranked_by_the_middle_and_held_by_what_is_left(tmp_path):
+    """Of two quotes the one next to the headline is not held, the one that the strikes price is."""
+    other = (QUOTE % 4.71).replace("Saltmarsh", "Northgate")
+    market = SPREAD + MARKET.replace("vol: 22%", f"vol: {VOLS}")
+    file = written(tmp_path, market + QUOTE % 5.96 + other)
+    found = mcx("verify", file, *ASKED, "--json").json
+    assert [(each["dealer"], each["explained"]) for each in found["ranking"]] == [
+        ("Saltmarsh desk", False), ("Northgate desk", True)]
+    assert [each["rest"] for each in found["ranking"]] == [each["gap"]["rest"] for each in found["quotes"]]
+    heads, first = mcx("verify", file, *ASKED).out.splitlines()[2:4]
+    assert heads.split() == ["dealer", "bid", "middle", "ask", "gap", "left", "held", "implied", "funding"]
+    assert f"{found['ranking'][0]['rest']:.4f}" in first
+    plain = mcx("verify", written(tmp_path, market.replace(VOLS, "22%") + QUOTE % 5.96 + other), *ASKED).out
+    assert "gap" in plain.splitlines()[2] and "left" not in plain.splitlines()[2] and "taken off" not in plain
 
 
 @pytest.mark.parametrize(("price", "width", "reaches"), [(4.90, "3%", True), (4.60, "3%", True), (5.30, "0.1%", False)])

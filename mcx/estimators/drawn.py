@@ -36,7 +36,7 @@ def check_draws(names: tuple[str, ...]) -> None:
     for name in names:
         if name in NOT_OF_SENSITIVITIES:
             raise RequestError(f"no variance reduction '{name}' of sensitivities, since {NOT_OF_SENSITIVITIES[name]}; "
-                               f"there are none, {', '.join(SUPPORTED)}")
+                               f"known here: {', '.join(SUPPORTED)}")
 
 
 @dataclass(frozen=True, slots=True)

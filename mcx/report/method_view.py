@@ -69,7 +69,14 @@ def method_row(line: MethodLine, factor: float, percent: bool) -> Iterator[str]:
         f"{short(line.variance_ratio)} ± {short(line.variance_ratio_error)}")
     yield f"{line.cost_ratio:.2f}"
     yield "" if line.efficiency is None else short(line.efficiency)
-    yield "" if line.efficiency is None else f"{line.seconds_to_1bp:.2g}"
+    yield "" if line.efficiency is None else to_1bp(line)
+
+
+def to_1bp(line: MethodLine) -> str:
+    """Seconds; no run is shorter than a path, and a price of 0 has no basis points."""
+    if not 0.0 < line.paths_to_1bp < 1.0:
+        return f"{line.seconds_to_1bp:.2g}" if line.paths_to_1bp else ""
+    return "one path"
 
 
 def short(number: float) -> str:

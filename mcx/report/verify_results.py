@@ -275,7 +275,8 @@ class VerifyResult(Result):
 @dataclass(frozen=True, slots=True)
 class Ranked(Result):
     """A quote among all for its contract, on one footing, the highest middle first; `funding` is the issuer's spread at
-    which our price is the quote (None where there is none, or not just one)."""
+    which our price is the quote (None where there is none, or not just one). `explained`: whether some band holds the
+    gap, or the `rest` of it (`gap.rest` of a `VerifyResult`)."""
 
     rank: int
     contract: str
@@ -284,6 +285,7 @@ class Ranked(Result):
     bid: float | None
     ask: float | None
     gap: float
+    rest: float | None
     explained: bool
     funding: float | None
     funding_standard_error: float | None

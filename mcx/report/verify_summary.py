@@ -300,4 +300,4 @@ def _ranked(rank: int, result: VerifyResult) -> Ranked:
              and each.value is not None]
     only = found[0] if len(found) == 1 else None
     return Ranked(rank, result.contract, result.quote.dealer, result.mid, result.bid, result.ask, result.gap.price,
-                  result.explained, only and only.value, only and only.standard_error)
+                  result.gap.rest, result.explained, only and only.value, only and only.standard_error)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Iterator
 
+from mcx.estimators.verify import MODEL
 from mcx.report.model_view import show_model
 from mcx.report.price_scale import Scale
 from mcx.report.terminal import Page, decimals, fixed
@@ -23,7 +24,9 @@ ANSWERS = {True: "yes", False: "no", None: ""}
 NO_NUMBER = {NONE_THERE: "", NO_EFFECT: "moves nothing"}
 LONGEST_NOTE = 240
 MOST_PAYMENTS = 12  # listed one by one; more are in --json
-RANKED = ("", "dealer", "bid", "middle", "ask", "gap", "held", "implied funding")
+RANKED = ("", "dealer", "bid", "middle", "ask", "gap", "left", "held", "implied funding")
+LEFT = RANKED.index("left")
+TAKEN_OFF = "taken off"
 MONEY = "where the money is"
 IN_PERCENT = ("vol", "yield", "rates", "funding", "correlation")
 
@@ -34,7 +37,12 @@ def show_verifications(table: VerifyTable, page: Page) -> None:
     for contract, scale in scales.items():
         of = f" of {contract}" if len(scales) > 1 else ""
         page.heading(f"quotes{of} on one footing, the highest first, {scale.unit}")
-        page.table(RANKED, rank_rows((each for each in table.ranking if each.contract == contract), scale), words=2)
+        rows = [RANKED, *rank_rows((each for each in table.ranking if each.contract == contract), scale)]
+        open_gaps = any(row[LEFT] for row in rows[1:])
+        heads, *rows = rows if open_gaps else [row[:LEFT] + row[LEFT + 1:] for row in rows]
+        page.table(heads, rows, words=2)
+        if open_gaps:
+            page.line("  left: of the gap, with each strike at its own vol")
     for each in table.quotes:
         page.line()
         show_verification(each, page)
@@ -64,9 +72,7 @@ def show_verification(result: VerifyResult, page: Page) -> None:
         (line.step, line.text, footed(line.quote, line.standard_error, scale, result, number))
         for number, line in enumerate(result.footing)), words=2)
     page.heading(f"what may hold {'the gap' if gap.rest is None else 'what is left of the gap'}, each by itself")
-    page.table(("", "half-width", "holds it"), (
-        (band.name, "not stated" if band.half_width is None else scale.show(band.half_width, places),
-         ANSWERS[band.holds]) for band in result.bands), last=1)
+    page.table(("", "half-width", "holds it"), band_rows(result, scale, places), last=1)
     if gap.z is not None and gap.rest is None:
         page.line(f"  sampling error: the gap is z = {gap.z:+.1f} standard errors")
     elif gap.rest is not None and gap.standard_error > 0.0:
@@ -98,6 +104,14 @@ def show_verification(result: VerifyResult, page: Page) -> None:
             page.items(texts)
 
 
+def band_rows(result: VerifyResult, scale: Scale, places: int) -> Iterator[tuple[str, str, str]]:
+    """Each band and whether it holds the gap; of what is left of it the model bracket is taken off already."""
+    for band in result.bands:
+        taken_off = band.name == MODEL and result.gap.rest is not None
+        yield (band.name, "not stated" if band.half_width is None else scale.show(band.half_width, places),
+               TAKEN_OFF if taken_off else ANSWERS[band.holds])
+
+
 def rest_row(gap: Gap, scale: Scale, places: int) -> Iterator[tuple[str, str]]:
     """What each strike at its own vol leaves of the gap, where that is the price."""
     if gap.rest is not None:
@@ -111,7 +125,8 @@ def rank_rows(ranking: Iterable[Ranked], scale: Scale) -> Iterator[tuple[str, ..
         funding = ("" if each.funding is None else
                    f"{1e4 * each.funding:,.1f} ± {1e4 * each.funding_standard_error:,.1f} bp")
         yield (str(each.rank), each.dealer, _or_none(each.bid, scale), scale.show(each.mid, 4),
-               _or_none(each.ask, scale), scale.show(each.gap, 4), ANSWERS[each.explained], funding)
+               _or_none(each.ask, scale), scale.show(each.gap, 4), _or_none(each.rest, scale),
+               ANSWERS[each.explained], funding)
 
 
 def corner(worst: WorstCorner, gap: Gap, scale: Scale, places: int) -> str:
@@ -154,8 +169,7 @@ def implied_row(each: ImpliedInput) -> tuple[str, ...]:
 
 
 def nowhere(implied: Iterable[ImpliedInput]) -> Iterator[str]:
-    """Of each input that moves the price and cannot meet the quote alone, the range that was looked through; those of one
-    range together."""
+    """Which inputs move the price and cannot meet the quote alone, with the range that was looked through."""
     ranges: dict[tuple[str, str], list[str]] = {}
     for each in implied:
         if each.value is None and not NO_NUMBER[each.note]:

@@ -15,6 +15,7 @@ from mcx.report.verify_view import (
     ANSWERS,
     IN_PERCENT,
     MONEY,
+    band_rows,
     corner,
     footed,
     implied_row,
@@ -72,10 +73,8 @@ def _ladder(result: VerifyResult, scale: Scale, places: int) -> Iterator[Picture
     title = f"{words} and what may hold it, each by itself"
     yield Picture(title, gap_ladder(title, said, Bar(bar, apart, error, shown), bands, scale.unit),
                   "The gap is held where its broken line meets the band.")
-    yield Table("in numbers", ("", f"half-width, {scale.unit}", "holds it"), tuple(
-        (band.name, "not stated" if band.half_width is None else scale.show(band.half_width, places),
-         ANSWERS[band.holds]) for band in result.bands), tail=2,
-        note="" if result.worst_corner is None else corner(result.worst_corner, result.gap, scale, places))
+    yield Table("in numbers", ("", f"half-width, {scale.unit}", "holds it"), tuple(band_rows(result, scale, places)),
+                tail=2, note="" if result.worst_corner is None else corner(result.worst_corner, result.gap, scale, places))
 
 
 def _implied(result: VerifyResult) -> Iterator[Picture | Table | Notes]:
