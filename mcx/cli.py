@@ -210,6 +210,7 @@ def verify(files: tuple[str, ...], as_json: bool, **wishes: object) -> None:
     with _progress() as (progress, notice):
         result = api.verify(*files, progress=progress, notice=notice, **wishes)
     _show(result, as_json, _verify_view)
+    _end_if_interrupted(result, wishes["record"])
     if not result.explained:
         sys.exit(NO)
 

@@ -218,6 +218,26 @@ def test_a_contract_that_has_begun(tmp_path: Path):
     assert "needs a fixing of 'harbour' on 2026-03-02" in readings["barrier at each close"]["note"]
 
 
+def test_interrupted_between_quotes(tmp_path: Path, monkeypatch: pytest.MonkeyPatch):
+    """The verdict that is whole, who is left without one, and no record."""
+    from mcx.estimators import verify
+
+    file = quoted(tmp_path, QUOTE + QUOTE.replace("Saltmarsh", "Northgate"))
+    whole = verify.Bench.verify
+
+    def pressed_at_another(bench, quote, *wish):
+        if quote.who == "Northgate desk":
+            raise KeyboardInterrupt
+        return whole(bench, quote, *wish)
+
+    monkeypatch.setattr(verify.Bench, "verify", pressed_at_another)
+    outcome = mcx("verify", file, *ASKED, "--record", tmp_path / "r.json")
+    assert outcome.code == 130 and not (tmp_path / "r.json").exists()
+    assert outcome.out.rstrip().endswith("\ninterrupted: without a verdict are Northgate desk on Call")
+    found = mcx("verify", file, *ASKED, "--json").json
+    assert (found["not_verified"], len(found["quotes"])) == (["Northgate desk on Call"], 1)
+
+
 def test_a_record_reproduces(tmp_path: Path):
     """Everything is in it, and comes out again to the last bit; a changed number is told by its name."""
     from mcx.report import record as records

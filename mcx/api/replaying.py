@@ -47,6 +47,8 @@ def replay(
     if verb == "verify":
         wishes = [(each["solve"], each["target"]) for each in runs]
         results = verify_all(made, contracts, wishes, samplings, means)
+        if len(results) < len(runs):
+            raise KeyboardInterrupt
     elif verb == "greeks":
         from mcx.estimators.wishes import wish_of
 

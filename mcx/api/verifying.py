@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
 from mcx.api.outputs import check_one, outputs_of, write_outputs
@@ -66,12 +67,14 @@ def verify(
     check_one(wanted, count, "quote")
     contracts = made_ready(made, dated, apart=True)
     results = verify_all(made, contracts, [wish] * count, [sampling] * count, means)
+    missing = [f"{quote.who} on {quote.about}" for quote in made.quotes[len(results):]]
+    wanted = replace(wanted, record=None) if missing else wanted
     write_outputs("verify", files, made, contracts, results, wanted)
     if count == 1:
         return results[0]
     from mcx.report.verify_summary import verify_table
 
-    return verify_table(results)
+    return verify_table(results, missing)
 
 
 def verify_all(
@@ -81,7 +84,8 @@ def verify_all(
     samplings: Sequence[Sampling],
     means: Means,
 ) -> list[VerifyResult]:
-    """Every quote against its contract; the quotes of one contract share its paths."""
+    """Every quote against its contract; the quotes of one contract share its paths. After an interruption those so far;
+    raises KeyboardInterrupt if that is none."""
     from mcx.estimators.finite import finite
     from mcx.estimators.verify import Bench
     from mcx.report.verify_summary import verify_result
@@ -91,10 +95,15 @@ def verify_all(
     results = []
     for quote, wish, sampling in zip(made.quotes, wishes, samplings, strict=True):
         key = quote.about, sampling
-        with finite(ready[quote.about]):
-            if key not in benches:
-                benches[key] = Bench(ready[quote.about], made.market, sampling.precision, seed=sampling.seed,
-                                     threads=means.threads, progress=means.progress, notice=means.notice)
-            found = benches[key].verify(quote, *wish)
+        try:
+            with finite(ready[quote.about]):
+                if key not in benches:
+                    benches[key] = Bench(ready[quote.about], made.market, sampling.precision, seed=sampling.seed,
+                                         threads=means.threads, progress=means.progress, notice=means.notice)
+                found = benches[key].verify(quote, *wish)
+        except KeyboardInterrupt:
+            if not results:
+                raise
+            break
         results.append(verify_result(ready[quote.about], made.market, found, *wish))
     return results

@@ -227,6 +227,7 @@ class VerifyResult(Result):
     readings, and single inputs inside their stated uncertainty. `solve` and `target` repeat the request.
     """
 
+    interrupted: ClassVar[bool] = False  # a verdict comes whole or not at all
     contract: str
     payoff: str
     valuation: str | None
@@ -293,11 +294,17 @@ class Ranked(Result):
 
 @dataclass(frozen=True, slots=True)
 class VerifyTable(Result):
-    """Several quotes, in the order of the files, and ranked for each contract."""
+    """Several quotes, in the order of the files, and ranked for each contract. `not_verified` are those that an
+    interruption left without a verdict, as 'DEALER on CONTRACT'."""
 
     MAIN: ClassVar[str] = "ranking"
     quotes: tuple[VerifyResult, ...]
     ranking: tuple[Ranked, ...]
+    not_verified: tuple[str, ...] = ()
+
+    @property
+    def interrupted(self) -> bool:
+        return bool(self.not_verified)
 
     @property
     def explained(self) -> bool:

@@ -286,13 +286,13 @@ def _warnings(found: Verification, market: Market, contract: Contract) -> Iterat
                        f"{abs(each.z):.1f} errors away")
 
 
-def verify_table(results: Sequence[VerifyResult]) -> VerifyTable:
-    """Several quotes, ranked for each contract by their middle on our footing."""
+def verify_table(results: Sequence[VerifyResult], not_verified: Sequence[str] = ()) -> VerifyTable:
+    """Several quotes, ranked for each contract by their middle on our footing, and those without a verdict."""
     ranking = []
     for title in dict.fromkeys(result.contract for result in results):
         here = sorted((result for result in results if result.contract == title), key=lambda result: -result.mid)
         ranking += [_ranked(rank, result) for rank, result in enumerate(here, start=1)]
-    return VerifyTable(tuple(results), tuple(ranking))
+    return VerifyTable(tuple(results), tuple(ranking), tuple(not_verified))
 
 
 def _ranked(rank: int, result: VerifyResult) -> Ranked:

@@ -46,6 +46,9 @@ def show_verifications(table: VerifyTable, page: Page) -> None:
     for each in table.quotes:
         page.line()
         show_verification(each, page)
+    if table.not_verified:
+        page.line()
+        page.line(f"interrupted: without a verdict are {', '.join(table.not_verified)}", style="bold")
 
 
 def show_verification(result: VerifyResult, page: Page) -> None:
