@@ -301,3 +301,15 @@ def test_what_is_not_in_the_model_fits_what_the_bracket_says():
     strip, path = (each["limits"] for each in mcx("price", EXAMPLE, *ASKED, "--json").json["prices"])
     assert any("the strip" in each for each in strip) and not any("neither more paths" in each for each in strip)
     assert any("neither more paths" in each for each in path)
+
+
+@pytest.mark.parametrize(("strike", "outside"), [(100, False), (90, False), (85, True)])
+def test_a_headline_outside_its_bracket_is_said(tmp_path, strike, outside):
+    """Priced at 100 % of the spot, where a call refers to one other level with another vol, the headline is no price of
+    the bracket."""
+    vols = "{strikes: {90%: 22%, 100%: 22%, 120%: 22%}, priced_at: 100%}" if strike == 90 else VOLS.replace("spot", "100%")
+    call = CALL.replace("strike: 100", f"strike: {strike}")
+    file = written(tmp_path, call + MARKET.replace("vol: 22%", f"vol: {vols}"))
+    assert mcx("price", file, *ASKED, "--json").json["model_bracket"]["headline_outside"] is outside
+    text = " ".join(mcx("price", file, *ASKED).out.split())
+    assert ("which is no level of the contract, and lies outside" in text) is outside

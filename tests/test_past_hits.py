@@ -1,4 +1,5 @@
-"""Hits of the past whose day is told, or not, between dates on which something else happens."""
+"""Hits of the past: their day told by statements or fixings, or not told; what is owed of them, and what happens
+between."""
 
 from __future__ import annotations
 
@@ -8,6 +9,7 @@ from pathlib import Path
 
 import pytest
 from front_door import written
+from helpers import prepare
 from seasoned import faults
 
 import mcx as package
@@ -164,3 +166,83 @@ def test_given_levels_go_on_from_the_fixing_of_the_valuation_date(tmp_path: Path
     case = ALWAYS.replace("---", adjusted + NOT_YET) + TODAY.replace("LEVEL", str(today))
     found = package.readback(written(tmp_path, case), path=levels).path
     assert [(each.date, each.amount) for each in found.payments] == [(paid, 5.0)]
+
+
+HIT = """contract: hit
+currency: EUR
+units: 1
+assets: [harbour]
+start: START
+settlement: 2 business days
+calendar: {holidays: none, roll: following}
+payoff: barrier
+terms:
+  side: call
+  direction: down
+  knock: out
+  strike: 100
+  barrier: 80
+  watched: {continuous: [START, 2027-12-01]}
+  expiry: 2027-12-01
+  rebate_at_hit: 5
+---
+market: 2027-06-01
+rates: {EUR: 2%}
+assets: {harbour: {spot: 100, currency: EUR, yield: 0%, vol: 20%}}
+"""
+
+
+def test_hits_of_a_watch_that_has_begun():
+    """Not hit so far, it is worth what one is that begins today, to the last digit."""
+    fresh = HIT.replace("START", "2027-06-01")
+    begun = HIT.replace("START", "2026-12-01").replace("---", "happened: {touched: {2027-06-01: false}}\n---")
+    one, other = (prepare(text).price(1 << 12, 7) for text in (fresh, begun))
+    assert (one.mean, one.error) == (other.mean, other.error)
+
+
+def hit(happened: str, more: str = "", today: str = "2027-06-01") -> str:
+    text = HIT.replace("START", "2026-12-01").replace("market: 2027-06-01", f"market: {today}")
+    return text.replace("---", f"happened: {{touched: {happened}}}\n---") + more
+
+
+@pytest.mark.parametrize(("happened", "more", "day", "due"), [
+    ("{2027-05-31: false, 2027-06-01: true}", "", "2027-06-01", "2027-06-03"),
+    ("{2027-05-30: false, 2027-05-31: true}", "", "2027-05-31", "2027-06-02"),
+    ("{2027-05-27: false, 2027-05-28: true}", "", "2027-05-28", "2027-06-01"),  # a Friday; paid today
+    ("{2027-05-31: false}", "fixings: {harbour: {2027-06-01: 79}}\n", "2027-06-01", "2027-06-03"),
+    ("{2027-05-28: false, 2027-05-31: true}", "fixings: {harbour: {2027-05-31: 79}}\n", None, None),  # or the weekend
+])
+def test_what_is_owed_after_a_hit_of_the_past(tmp_path: Path, happened: str, more: str, day: str | None, due: str):
+    """The amount, discounted from its payment, while the settlement lag runs; the day must be told by statements or
+    fixings, and nothing else is left of the knock-out."""
+    if day is None:
+        (fault,) = faults(tmp_path, hit(happened, more))
+        assert "'touched' came true after 2027-05-28 and by 2027-05-31" in fault
+        assert "'happened: {touched: {2027-05-30: false, 2027-05-31: true}}'" in fault
+        return
+    result = package.price(written(tmp_path, hit(happened, more)), paths=64)
+    lag = (date.fromisoformat(due) - date(2027, 6, 1)).days
+    assert result.price == pytest.approx(5.0 * exp(-0.02 * lag / 365), rel=1e-14) and result.standard_error == 0.0
+    assert [(each.observed, each.date, each.amount) for each in result.owed] == [(day, due, 5.0)]
+    past = package.readback(tmp_path / "case.yaml").state.past
+    assert [(each.date, each.happened) for each in past] == [(day, "yes")]
+
+
+def test_a_hit_of_long_ago_owes_nothing(tmp_path: Path):
+    """On whichever day it came: all is paid, and of the contract nothing is left."""
+    result = package.price(written(tmp_path, hit("{2027-02-27: false, 2027-03-31: true}")), paths=64)
+    assert (result.price, result.standard_error, result.owed) == (0.0, 0.0, ())
+    (past,) = package.readback(tmp_path / "case.yaml").state.past
+    assert past.date == "2027-02-28 to 2027-03-31"
+
+
+def test_a_touch_of_the_past_has_ended(tmp_path: Path):
+    """Its cash is owed, and then it is worth nothing."""
+    text = hit("{2027-05-30: false, 2027-05-31: true}").replace("payoff: barrier", "payoff: touch_at_hit")
+    for line in ("  side: call\n", "  knock: out\n", "  strike: 100\n", "  expiry: 2027-12-01\n"):
+        text = text.replace(line, "")
+    text = text.replace("rebate_at_hit: 5", "cash: 5")
+    result = package.price(written(tmp_path, text), paths=64)
+    assert (result.ended, result.price) == ("2027-05-31", pytest.approx(5.0 * exp(-0.02 / 365), rel=1e-14))
+    later = package.price(written(tmp_path, text.replace("market: 2027-06-01", "market: 2027-06-07")), paths=64)
+    assert (later.ended, later.price) == ("2027-05-31", 0.0)

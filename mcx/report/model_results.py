@@ -57,6 +57,8 @@ class ModelBracketResult(Result):
     exact         whether these are all payments that differ, of levels in the contract's currency: then `strip` needs
                   no model
     indicative    why the bracket is only indicative; empty where it is not
+    headline_outside  whether the headline price is none of these: its vols may be of a strike that is no level of the
+                  contract
     paths         of the differences
     """
 
@@ -69,6 +71,7 @@ class ModelBracketResult(Result):
     strip: tuple[float, ...]
     exact: bool
     indicative: tuple[str, ...]
+    headline_outside: bool
     paths: int
 
 
@@ -122,7 +125,12 @@ def model_bracket_result(found: ModelBracket | None, ready: Ready, here: MarketM
 
     return ModelBracketResult(*end(low), *end(high), tuple(headline(name, vol) for name, vol in found.headline_vols),
                               tuple(map(at, found.strikes)), tuple(price + change for change in found.strip),
-                              found.exact, tuple(_indicative(found, ready)), found.paths)
+                              found.exact, tuple(_indicative(found, ready)), _without_headline(low, high), found.paths)
+
+
+def _without_headline(low: Estimate | None, high: Estimate | None) -> bool:
+    """Whether all prices lie on one side of the headline, which they are differences from, by more than rounding."""
+    return low is not None and high is not None and (low.value > ROUNDING or high.value < -ROUNDING)
 
 
 def _indicative(found: ModelBracket, ready: Ready) -> Iterator[str]:
@@ -161,4 +169,5 @@ def _converted(ready: Ready) -> Iterator[str]:
 def _flat(market: Market) -> bool:
     """Whether every vol is the same at each strike."""
     by_strike = [asset.by_strike for asset in market.assets.values() if asset.by_strike is not None]
-    return all(len({tuple(node.quoted.value for node in curve.nodes) for curve in vols.curves}) == 1 for vols in by_strike)
+    return all(len({tuple(node.quoted.value for node in curve.nodes) for curve in vols.curves}) == 1
+               for vols in by_strike)

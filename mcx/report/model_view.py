@@ -24,8 +24,9 @@ def model_line(found: ModelBracketResult, scale: Scale, standard_error: float) -
     places = model_places(found, scale, standard_error)
     low, high = scale.show(found.lower, places), scale.show(found.upper, places)
     tail = "; indicative only" if found.indicative else ""
+    outside = ", which is no level of the contract, and lies outside" if found.headline_outside else ""
     return (f"{low} to {high}{scale.sign} by the vols of the levels that the contract refers to{tail}; the headline "
-            f"takes {_headline(found)}")
+            f"takes {_headline(found)}{outside}")
 
 
 def show_model(found: ModelBracketResult, scale: Scale, standard_error: float, page: Page) -> None:
